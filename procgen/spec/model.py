@@ -1,0 +1,118 @@
+"""The checked Spec: frozen dataclasses, and the faults that stand in its place."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from types import MappingProxyType
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    from procgen.spec.calendar import Grid
+
+NO_PLACES: Mapping[str, Place] = MappingProxyType({})
+
+
+@dataclass(frozen=True, slots=True)
+class Place:
+    """Where something stands: file, line and column (from 1; 0 when not from a file), and dotted path."""
+
+    file: str | None
+    line: int
+    column: int
+    path: str
+
+    def __str__(self) -> str:
+        where = [self.file] if self.file else []
+        if self.line:
+            where.append(f"line {self.line}, column {self.column}")
+        spot = self.path or "the spec"
+        return f"{spot} ({', '.join(where)})" if where else spot
+
+
+@dataclass(frozen=True, slots=True)
+class Fault:
+    """One thing wrong with a spec: what was expected and given and how to mend it, and where."""
+
+    place: Place
+    message: str
+
+    def __str__(self) -> str:
+        return f"{self.message}\n  at {self.place}"
+
+
+class SpecError(ValueError):
+    """Every fault of a spec; `str` lists them all."""
+
+    def __init__(self, faults: tuple[Fault, ...]) -> None:
+        super().__init__(faults)
+        self.faults = faults
+
+    def __str__(self) -> str:
+        count = len(self.faults)
+        head = "" if count == 1 else f"{count} faults in this spec\n"
+        return head + "\n".join(str(fault) for fault in self.faults)
+
+
+@dataclass(frozen=True)
+class Entry:
+    """One term of a body, checked.
+
+    `values` has every declared parameter, per step, defaults filled in, without bodies and shock; beside a
+    `shock`, the parameters it replaces (sd, total_sd, law) are None. Equality ignores places.
+    """
+
+    kind: str
+    label: str
+    times: float
+    values: Mapping[str, Any]
+    bodies: Mapping[str, tuple[Entry, ...]]
+    shock: Entry | None
+    place: Place = field(compare=False)
+    places: Mapping[str, Place] = field(compare=False, default=NO_PLACES)
+
+
+@dataclass(frozen=True)
+class Series:
+    """A named output column."""
+
+    name: str
+    of: tuple[Entry, ...]
+    unit: str | None
+    type: str  # "float64", "float32" or "int64"
+    decimals: int | None
+    stream: str
+    note: str | None
+    place: Place = field(compare=False)
+
+
+@dataclass(frozen=True)
+class Shared:
+    """A body drawn once a path and used by several series; its stream is its name."""
+
+    name: str
+    of: tuple[Entry, ...]
+    place: Place = field(compare=False)
+
+
+@dataclass(frozen=True)
+class Correlation:
+    """Correlation of the primary normals of `names` (addresses "series.label"), in order of first appearance."""
+
+    names: tuple[str, ...] = ()
+    matrix: tuple[tuple[float, ...], ...] = ()
+
+
+@dataclass(frozen=True)
+class Spec:
+    """A checked spec. `raw` is the mapping as written, anchors expanded; reading it again gives an equal Spec."""
+
+    title: str | None
+    seed: int
+    paths: int
+    time: Grid
+    shared: Mapping[str, Shared]
+    series: Mapping[str, Series]
+    correlation: Correlation
+    raw: dict[str, Any] = field(compare=False)
+    file: str | None = field(compare=False)

@@ -1,0 +1,58 @@
+"""The words that faults share: nearest names, lists of choices, bounds, and what a value looks like."""
+
+from __future__ import annotations
+
+import difflib
+from collections.abc import Iterable
+
+
+def unknown_key(key: str, allowed: Iterable[str]) -> str:
+    """Return the message for a key nobody declared, with the nearest valid one."""
+    allowed = list(allowed)
+    hint = did_you_mean(key, allowed)
+    return f"unknown key {key}; expected {one_of(allowed)}" + (f"; {hint}" if hint else "")
+
+
+def did_you_mean(given: object, names: Iterable[str]) -> str:
+    """Return "did you mean X?" for the nearest of `names`, or "" when none is near."""
+    if not isinstance(given, str) or len(given) > 100:
+        return ""
+    near = difflib.get_close_matches(given, list(names), n=1, cutoff=0.6)
+    return f"did you mean {near[0]}?" if near else ""
+
+
+def one_of(words: Iterable[str]) -> str:
+    """Return "a", "a or b", "one of a, b, c"; "no key" for none."""
+    words = list(words)
+    if len(words) > 2:
+        return f"one of {', '.join(words)}"
+    return " or ".join(words) if words else "no key"
+
+
+def bounds(above: float | None, below: float | None, at_least: float | None, at_most: float | None) -> str:
+    """Return bounds in words that follow "a number", such as " above 0" or " in (0, 1]"."""
+    low = above if above is not None else at_least
+    high = below if below is not None else at_most
+    if low is not None and high is not None:
+        left, right = "(" if above is not None else "[", ")" if below is not None else "]"
+        return f" in {left}{low:g}, {high:g}{right}"
+    if low is not None:
+        return f" above {low:g}" if above is not None else f" of at least {low:g}"
+    if high is not None:
+        return f" below {high:g}" if below is not None else f" of at most {high:g}"
+    return ""
+
+
+def unquote(value: object) -> str:
+    """Return a hint when a text looks like a number."""
+    if not isinstance(value, str) or len(value) > 40:
+        return ""
+    try:
+        float(value)
+    except ValueError:
+        try:
+            float(value.replace(",", "."))
+        except ValueError:
+            return ""
+        return "write the decimal sign as a point"
+    return "this is a text; write the number plainly, without quotes, spaces or underscores"
