@@ -2,15 +2,36 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field
-from types import MappingProxyType
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
     from procgen.spec.calendar import Grid
 
-NO_PLACES: Mapping[str, Place] = MappingProxyType({})
+
+class Frozen(Mapping[str, Any]):
+    """A read-only mapping that keeps its order, can be hashed, and can be sent to a worker process."""
+
+    __slots__ = ("_items",)
+
+    def __init__(self, items: Mapping[str, Any] | None = None) -> None:
+        self._items = dict(items or {})
+
+    def __getitem__(self, key: str) -> Any:
+        return self._items[key]
+
+    def __iter__(self) -> Iterator[str]:
+        return iter(self._items)
+
+    def __len__(self) -> int:
+        return len(self._items)
+
+    def __hash__(self) -> int:
+        return hash(frozenset(self._items.items()))
+
+    def __repr__(self) -> str:
+        return repr(self._items)
 
 
 @dataclass(frozen=True, slots=True)
@@ -69,7 +90,7 @@ class Entry:
     bodies: Mapping[str, tuple[Entry, ...]]
     shock: Entry | None
     place: Place = field(compare=False)
-    places: Mapping[str, Place] = field(compare=False, default=NO_PLACES)
+    places: Mapping[str, Place] = field(compare=False, default_factory=Frozen)
 
 
 @dataclass(frozen=True)
@@ -97,7 +118,7 @@ class Shared:
 
 @dataclass(frozen=True)
 class Correlation:
-    """Correlation of the primary normals of `names` (addresses "series.label"), in order of first appearance."""
+    """Correlation of the primary normals of `names` ("series.label"), in order of first appearance."""
 
     names: tuple[str, ...] = ()
     matrix: tuple[tuple[float, ...], ...] = ()
@@ -105,7 +126,10 @@ class Correlation:
 
 @dataclass(frozen=True)
 class Spec:
-    """A checked spec. `raw` is the mapping as written, anchors expanded; reading it again gives an equal Spec."""
+    """A checked spec.
+
+    `raw` is the mapping as written, anchors expanded; reading it again gives an equal Spec.
+    """
 
     title: str | None
     seed: int
