@@ -1,0 +1,209 @@
+"""What a term is: declarations, and the questions that every term answers.
+
+A term is a class with its declarations as class attributes and its configured values on the instance.
+It answers, in this order in every family file: ``recurse`` (draws and inputs become values), ``invert``
+(values become inputs again), ``ahead`` (mean and variance of what comes next, given a state) and
+``moments`` (its exact theory, written on the axis that the theory room hands in). What has no answer
+returns an :class:`Unknown` with the reason in words.
+
+Arrays are tiles: rows are steps, columns are paths. A deterministic term returns one column, which
+broadcasts. A state is a dict of named arrays; a recursion never changes the state that it was given.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterable, Mapping, Sequence
+from dataclasses import dataclass, field
+from typing import Any, ClassVar
+
+import numpy as np
+
+from procgen.chance.laws import Normal
+from procgen.spec.declare import LawOf, Parameter, Real
+
+Array = np.ndarray
+State = dict[str, Array]
+Issue = tuple[str, str]  # the parameter's name, and what is wrong with it in a sentence
+
+
+@dataclass(frozen=True)
+class Unknown:
+    """An answer that does not exist in closed form, or at all, with the reason in words."""
+
+    reason: str
+
+    def __bool__(self) -> bool:
+        return False
+
+
+@dataclass(frozen=True)
+class Ahead:
+    """Forecast of a term from its state: mean and variance, each (steps, paths) or (steps, 1)."""
+
+    mean: Array
+    variance: Array
+
+
+@dataclass(frozen=True)
+class Draw:
+    """A primary stream that a term asks for: its role in the address, and the law of its shocks."""
+
+    role: str
+    law: Any
+
+
+@dataclass(frozen=True)
+class Before:
+    """What a term is handed to set up its state just before step 0.
+
+    Attributes
+    ----------
+    head : int
+        How many of its own values before step 0 somebody will read.
+    inputs : tuple of arrays (n_i, paths)
+        The inputs at steps -n_i .. -1, oldest first; n_i is at least ``reach(head)[i]``.
+    peek : callable
+        ``peek(i)`` gives input i at step 0, (1, paths).
+    normals : callable
+        ``normals(k)`` gives (k, paths) standard normals of the term's own role ``start``.
+    joint : pair of arrays or None
+        Past values and past shocks, newest first, where the term starts jointly with others.
+    """
+
+    head: int
+    inputs: tuple[Array, ...]
+    peek: Callable[[int], Array]
+    normals: Callable[[int], Array]
+    joint: tuple[Array, Array] | None = None
+
+
+class Term:
+    """One building block. Subclasses declare themselves in class attributes; see the module text."""
+
+    kind: ClassVar[str] = ""
+    family: ClassVar[str] = ""
+    purpose: ClassVar[str] = ""
+    source: ClassVar[str] = ""
+    example: ClassVar[str] = ""
+    knows: ClassVar[str] = ""
+    parameters: ClassVar[tuple[Parameter, ...]] = ()
+    short: ClassVar[str | None] = None
+    takes_shock: ClassVar[bool] = False
+    noise: ClassVar[bool] = False
+    composition: ClassVar[bool] = False
+    separate: ClassVar[bool] = False  # whether each entry of its body is an input of its own
+    outputs: ClassVar[tuple[str, ...]] = ()
+    portable: ClassVar[bool] = True
+    why_not_portable: ClassVar[str] = ""
+
+    def __init__(self, values: Mapping[str, Any]):
+        self.values = values
+
+    def __getattr__(self, name: str) -> Any:
+        try:
+            return self.__dict__["values"][name]
+        except KeyError:
+            raise AttributeError(f"{type(self).__name__} has no parameter or attribute {name!r}") from None
+
+    @classmethod
+    def check(cls, values: Mapping[str, Any]) -> Iterable[Issue]:
+        """Faults that no single parameter shows, as (parameter, sentence)."""
+        return ()
+
+    def draws(self) -> tuple[Draw, ...]:
+        """The primary streams that the term needs, in the order in which ``recurse`` receives them."""
+        return ()
+
+    def equation(self, *inputs: str) -> str:
+        """The term in the usual notation, with its numbers."""
+        raise NotImplementedError
+
+    def past(self) -> int | None:
+        """How many values before step 0 the term can give at most; None when any number."""
+        return None
+
+    def reach(self, head: int) -> tuple[int, ...]:
+        """How many steps before step 0 each input must give so that this term can give `head` of its own."""
+        return ()
+
+    def begin(self, before: Before) -> tuple[Array | None, State]:
+        """Values at steps -head .. -1 (None when head is 0) and the state just before step 0."""
+        return None, {}
+
+    def recurse(self, inputs: Sequence[Array], state: State, at: Array) -> tuple[Any, State]:
+        """Values at the steps `at` from the inputs at those steps, and the state after them.
+
+        A term with hidden outputs returns a dict: its values under ``""`` and each output by name.
+        """
+        raise NotImplementedError
+
+    def invert(self, values: Array, known: Sequence[Array | None], state: State | None, at: Array):
+        """The one unknown input (None in `known`) from the values; NaN where the unknown past matters."""
+        return Unknown(f"{self.kind} cannot be inverted")
+
+    def ahead(self, steps: Array, state: State, *inputs: Ahead) -> Ahead | Unknown:
+        """Mean and variance at the coming `steps`, given the state just before the first of them."""
+        return Unknown(f"{self.kind} has no closed forecast")
+
+    def moments(self, axis: Any, *inputs: Any) -> Any:
+        """The term's exact theory as an expression on the axis."""
+        raise NotImplementedError
+
+
+SD = Parameter(
+    "sd", "σ", Real(above=0), "standard deviation of the shock", default=None, unit="series", per="diffusion"
+)
+TOTAL_SD = Parameter(
+    "total_sd",
+    "σₓ",
+    Real(above=0),
+    "standard deviation of the stationary term itself, instead of `sd`",
+    default=None,
+    unit="series",
+)
+LAW = Parameter("law", "", LawOf(), "law of the shock, standardised to mean 0 and variance 1", default=Normal())
+
+
+def one_spread(values: Mapping[str, Any]) -> Iterable[Issue]:
+    """The rule that a driven term states its spread once: `sd`, `total_sd` or a `shock`."""
+    if values.get("shocked"):
+        return
+    given = [name for name in ("sd", "total_sd") if values.get(name) is not None]
+    if not given:
+        yield "sd", "expected `sd` (of the shock) or `total_sd` (of the term), got neither; give exactly one"
+    if len(given) == 2:
+        yield "total_sd", "expected `sd` or `total_sd`, got both; keep one of them"
+
+
+@dataclass(eq=False)
+class Node:
+    """A configured term in its place in the graph.
+
+    ``name`` is the address ``series.label`` that people see; ``key`` is unique and names the state.
+    """
+
+    key: str
+    name: str
+    term: Term
+    inputs: tuple[Any, ...] = ()
+    head: int = 0
+    place: Any = None
+    entry: Any = None
+    joint: Any = None
+    hidden: frozenset[str] = field(default_factory=frozenset)
+
+
+def rows(values: Sequence[float]) -> Array:
+    """A sequence of numbers as one deterministic column."""
+    return np.array(values, dtype=np.float64).reshape(-1, 1)
+
+
+def number(x: float) -> str:
+    """A coefficient as it is written in an equation: shortest digits, a true minus sign."""
+    return f"{x:.6g}".replace("-", "−")
+
+
+def signed(x: float, what: str) -> str:
+    """`+ 0.5 x` or `− 0.5 x`, for the next summand of an equation."""
+    size = "" if abs(x) == 1 and what else number(abs(x))
+    return f"{'−' if x < 0 else '+'} {size}{' ' if size and what else ''}{what}"

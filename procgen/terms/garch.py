@@ -1,0 +1,267 @@
+"""Conditional heteroskedasticity: white shocks whose variance follows the squares before them."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+
+from procgen.chance.kernel import kernel
+from procgen.spec.declare import Flag, Parameter, Real, Reals, Record
+from procgen.terms.base import LAW, Ahead, Draw, Term, number, rows, signed
+from procgen.terms.start import companion, decay_length
+
+FORGOTTEN = 1e-9
+
+
+@kernel
+def recursion(z, omega, alpha, beta, e, square, h):
+    """e[t] = √h[t]·z[t], h[t] = ω + Σα e²[t−i] + Σβ h[t−j]; `square` and `h` begin with their past."""
+    p = alpha.shape[0]
+    q = beta.shape[0]
+    for t in range(z.shape[0]):
+        v = omega + alpha[0] * square[t + p - 1]
+        for i in range(1, p):
+            v = v + alpha[i] * square[t + p - 1 - i]
+        for j in range(q):
+            v = v + beta[j] * h[t + q - 1 - j]
+        h[t + q] = v
+        x = np.sqrt(v) * z[t]
+        e[t] = x
+        square[t + p] = x * x
+
+
+@kernel
+def variance(omega, alpha, beta, square, h):
+    """The conditional variances of known squares, written into `h` behind its past."""
+    p = alpha.shape[0]
+    q = beta.shape[0]
+    for t in range(h.shape[0] - q):
+        v = omega + alpha[0] * square[t + p - 1]
+        for i in range(1, p):
+            v = v + alpha[i] * square[t + p - 1 - i]
+        for j in range(q):
+            v = v + beta[j] * h[t + q - 1 - j]
+        h[t + q] = v
+
+
+ALPHA = Parameter("alpha", "α", Reals(at_least=0), "weights of e²[t−1], e²[t−2], …")
+BETA = Parameter("beta", "β", Reals(at_least=0), "weights of h[t−1], h[t−2], …", default=())
+OMEGA = Parameter("omega", "ω", Real(above=0), "the constant in the variance", default=None, unit="series²")
+SD = Parameter(
+    "sd", "σ", Real(above=0), "unconditional standard deviation, instead of `omega`", default=None, unit="series"
+)
+INFINITE = Parameter(
+    "allow_infinite_variance", "", Flag(), "run a strictly stationary garch without a variance on purpose", default=False
+)
+BEFORE = Parameter(
+    "before",
+    "",
+    Record(
+        Parameter("variance", "h", Reals(above=0), "variances before step 0, oldest first", unit="series²"),
+        Parameter(
+            "shocks", "e", Reals(), "values before step 0, oldest first; without them their squares are h",
+            default=(), unit="series",
+        ),
+    ),
+    "what came before step 0, to leave from a known variance instead of the stationary law",
+    default=None,
+)
+
+
+class Garch(Term):
+    kind = "garch"
+    family = "volatility"
+    purpose = "white shocks whose variance follows the squared shocks before them"
+    source = "Bollerslev (1986); arch is its case without beta (Engle 1982); stationarity: Nelson (1990)"
+    example = "garch: {sd: 6.3, alpha: 0.1, beta: 0.85}"
+    knows = "variance, kurtosis and autocorrelation of squares where they exist; uncorrelated, not independent"
+    noise = True
+    outputs = ("variance",)
+    parameters = (OMEGA, SD, ALPHA, BETA, LAW, INFINITE, BEFORE)
+
+    @classmethod
+    def check(cls, values):
+        alpha, beta, before = values["alpha"], values.get("beta", ()), values["before"]
+        persistence = sum(alpha) + sum(beta)
+        if (values["omega"] is None) == (values["sd"] is None):
+            yield "omega", "expected `omega` or `sd` (the unconditional one), exactly one of them"
+        if persistence >= 1:
+            if values["sd"] is not None:
+                yield "sd", f"alpha + beta is {number(persistence)}: there is no unconditional sd; give `omega`"
+            if before is None:
+                yield from _without_variance(values, alpha, beta, persistence)
+        if before is not None:
+            if len(before["variance"]) < max(1, len(beta)):
+                yield "before", f"expected {max(1, len(beta))} past variances, got {len(before['variance'])}"
+            if before["shocks"] and len(before["shocks"]) < len(alpha):
+                yield "before", f"expected {len(alpha)} past shocks, got {len(before['shocks'])}"
+            if not before["shocks"] and len(before["variance"]) < len(alpha):
+                yield "before", f"expected `shocks`, or {len(alpha)} past variances to stand for their squares"
+
+    def __init__(self, values):
+        super().__init__({"beta": (), **values})
+
+    def level(self):
+        """ω: as given, or from the unconditional standard deviation."""
+        if self.omega is not None:
+            return self.omega
+        return self.sd * self.sd * (1.0 - _sum(self.alpha) - _sum(self.beta))
+
+    def resting(self):
+        """The variance to begin from: the unconditional one; ω/(1 − Σβ) where there is none."""
+        rest = 1.0 - _sum(self.alpha) - _sum(self.beta)
+        if rest <= 0.0:
+            rest = max(1.0 - _sum(self.beta), 2.0**-20)
+        return self.level() / rest
+
+    def scale(self):
+        """Unconditional standard deviation, in the series' unit."""
+        return float(np.sqrt(self.resting()))
+
+    def as_member(self):
+        """None: a past that follows the squares cannot be drawn with linear terms."""
+        return None
+
+    def draws(self):
+        return (Draw("innovation", self.law),)
+
+    def past(self):
+        return None if self.before is None else len(self.before["shocks"])
+
+    def _weights(self):
+        n = max(len(self.alpha), len(self.beta))
+        padded = [(*side, *([0.0] * (n - len(side)))) for side in (self.alpha, self.beta)]
+        return [a + b for a, b in zip(*padded, strict=True)]
+
+    def burn(self):
+        """Steps until the variance has forgotten where it began, to 1e-12."""
+        if self.before is not None:
+            return 0
+        weights = self._weights()
+        if _sum(weights) < 1.0:
+            return decay_length(companion(weights, (), len(weights), 0)[0])
+        # Without a variance: E(β + αz²)^s < 1 for some s < 1 bounds how long the start is felt. The
+        # expectation is rounded up to a power of two, which no rounding of it can move.
+        factor = min(
+            self.law.expect(lambda z, s=s: (self.beta[0] + self.alpha[0] * z * z) ** s) if self._first_order() else 0.999
+            for s in (0.05, 0.1, 0.25, 0.5, 0.75)
+        )
+        return 2 ** min(16, math.ceil(math.log2(math.log(1e-12) / math.log(factor))))
+
+    def _first_order(self):
+        return len(self.alpha) == 1 and len(self.beta) == 1
+
+    def reach(self, head):
+        return (max(self.burn(), head),)
+
+    def begin(self, before):
+        p, q = len(self.alpha), len(self.beta)
+        if self.before is not None:
+            h = rows(self.before["variance"])
+            square = rows([e * e for e in self.before["shocks"]]) if self.before["shocks"] else h
+            past = rows(self.before["shocks"])
+            values = {"": past[len(past) - before.head :], "variance": h[len(h) - before.head :]}
+            return values, {"square": square[len(square) - p :], "h": h[len(h) - q :]}
+        rest = self.resting()
+        state = {"square": np.full((p, 1), rest), "h": np.full((q, 1), rest)}
+        (count,) = self.reach(before.head)
+        z = before.inputs[0][len(before.inputs[0]) - count :]
+        values, state = self.recurse((z,), state, None)
+        return {name: rows[count - before.head :] for name, rows in values.items()}, state
+
+    def recurse(self, inputs, state, at):
+        z = inputs[0]
+        p, q = len(self.alpha), len(self.beta)
+        square, h, e = _buffer(state["square"], z), _buffer(state["h"], z), np.empty_like(z)
+        recursion(z, self.level(), np.array(self.alpha), np.array(self.beta), e, square, h)
+        state = {"square": square[len(square) - p :].copy(), "h": h[len(h) - q :].copy()}
+        return {"": e, "variance": h[q:]}, state
+
+    def invert(self, values, known, state, at):
+        p, q = len(self.alpha), len(self.beta)
+        if state is None:
+            length = decay_length(companion(self.beta, (), q, 0)[0], FORGOTTEN) if q else 0
+            rest = self.resting()
+            state = {"square": np.full((p, 1), rest), "h": np.full((q, 1), rest), "skip": np.array([p + length])}
+        square = np.concatenate([np.broadcast_to(state["square"], (p, values.shape[1])), values * values])
+        h = _buffer(state["h"], values)
+        variance(self.level(), np.array(self.alpha), np.array(self.beta), square, h)
+        z = values / np.sqrt(h[q:])
+        skip = int(state.get("skip", [0])[0])
+        z[:skip] = np.nan
+        left = np.array([max(0, skip - len(values))])
+        return z, {"square": square[len(square) - p :].copy(), "h": h[len(h) - q :].copy(), "skip": left}
+
+    def ahead(self, steps, state, *inputs):
+        p, q = len(self.alpha), len(self.beta)
+        count = max(state["square"].shape[1], state["h"].shape[1] if q else 1)
+        out = np.empty((len(steps), count))
+        square, h = (list(np.broadcast_to(state[k], (len(state[k]), count))) for k in ("square", "h"))
+        for t in range(len(steps)):
+            out[t] = self.level()
+            for i in range(p):
+                out[t] = out[t] + self.alpha[i] * square[len(square) - 1 - i]
+            for j in range(q):
+                out[t] = out[t] + self.beta[j] * h[len(h) - 1 - j]
+            square.append(out[t])
+            h.append(out[t])
+        return Ahead(np.zeros_like(out), out)
+
+    def moments(self, axis, *inputs):
+        given = self.before or {}
+        return axis.garch(
+            self.address,
+            self.law,
+            self.level(),
+            self.alpha,
+            self.beta,
+            before_variance=tuple(given["variance"]) if given else None,
+            before_shocks=tuple(given["shocks"]) if given else None,
+        )
+
+    def equation(self, *inputs):
+        parts = [number(self.level())]
+        parts += [signed(c, f"e²[t−{i}]") for i, c in enumerate(self.alpha, start=1)]
+        parts += [signed(c, f"h[t−{j}]") for j, c in enumerate(self.beta, start=1)]
+        return f"e[t] = √h[t] z[t],  h[t] = {' '.join(parts)},  z independent {self.law}"
+
+
+class Arch(Garch):
+    kind = "arch"
+    purpose = "white shocks whose variance follows the last squared shocks alone"
+    source = "Engle (1982)"
+    example = "arch: {omega: 0.7, alpha: 0.3}"
+    parameters = tuple(p for p in Garch.parameters if p.name != "beta")
+
+
+def _without_variance(values, alpha, beta, persistence):
+    """What to say of alpha + beta >= 1: not stationary at all, or stationary without a variance."""
+    if len(alpha) == len(beta) == 1 or (len(alpha) == 1 and not beta):
+        b = beta[0] if beta else 0.0
+        exponent = values["law"].expect(lambda z: np.log(b + alpha[0] * z * z))
+        if exponent >= 0:
+            yield (
+                "alpha",
+                f"expected E log(β + αz²) below 0 for a stationary garch, got {exponent:.4g}; lower alpha or beta",
+            )
+            return
+    if not values["allow_infinite_variance"]:
+        yield (
+            "alpha",
+            f"alpha + beta must be below 1 for a finite variance, got {number(persistence)}; lower one, or say "
+            "`allow_infinite_variance: true` to run it on purpose",
+        )
+
+
+def _sum(values):
+    total = 0.0
+    for value in values:
+        total = total + value
+    return total
+
+
+def _buffer(past, like):
+    out = np.empty((len(past) + len(like), like.shape[1]))
+    out[: len(past)] = past
+    return out

@@ -1,0 +1,319 @@
+"""From a checked spec to a graph of configured terms: what feeds what, how far back each must reach.
+
+Nodes are listed so that inputs come before what reads them. Primary streams are `Source` nodes; those whose
+normals are correlated form a `Group`, mixed in the order of the spec's `correlation`.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import dataclass, field
+from typing import Any
+
+import numpy as np
+
+from procgen.chance.laws import Normal
+from procgen.chance.portable import cholesky
+from procgen.chance.streams import Stream
+from procgen.spec.model import Entry, Fault, Place, Spec, SpecError
+from procgen.terms import catalogue
+from procgen.terms.base import Array, Node, Term
+from procgen.terms.combine import Hidden, Scaled, Sum
+from procgen.terms.noise import WhiteNoise
+from procgen.terms.start import JointStart
+
+
+@dataclass(eq=False)
+class Source:
+    """A primary stream of shocks of one law, at its address; `head` as for a node."""
+
+    name: str
+    stream: Stream
+    law: Any
+    head: int = 0
+    group: Group | None = None
+
+    inputs = ()
+
+
+@dataclass(eq=False)
+class Group:
+    """Sources whose primary normals are correlated, leader first, with the lower factor that mixes them."""
+
+    sources: tuple[Source, ...]
+    matrix: Array
+    factor: Array = field(init=False)
+
+    def __post_init__(self):
+        self.factor = cholesky(self.matrix)
+
+
+class Graph:
+    """The nodes of a spec. `series` maps each output column to its node."""
+
+    def __init__(self, spec: Spec):
+        self.spec = spec
+        self.sources: list[Source] = []
+        self.groups: list[Group] = []
+        self.filters: dict[int, Node] = {}
+        self._entries: dict[int, Node] = {}
+        self._owners: dict[str, Node] = {}
+        self._hidden: dict[tuple[int, str], Node] = {}
+        self._count = 0
+        self.series = {name: self._owner(name) for name in spec.series}
+        for name in spec.shared:
+            self._owner(name)
+        self._correlate()
+        self._plan()
+
+    def resolve(self, name: str) -> Node:
+        """The node that a name points to: a shared body, a series, series.label or series.label.output.
+
+        Raises KeyError with a sentence where there is none.
+        """
+        owner, *rest = name.split(".")
+        if owner not in self.spec.series and owner not in self.spec.shared:
+            raise KeyError(f"expected a series or shared body, got {owner!r} in {name!r}")
+        if not rest:
+            return self._owner(owner)
+        entry = self._entry_named(owner, rest[0], name)
+        node = self._entry(entry, owner)
+        if len(rest) == 1:
+            return node
+        while isinstance(node.term, Scaled):
+            node = node.inputs[0]
+        return self._hidden_of(node, ".".join(rest[1:]), name)
+
+    def source_of(self, name: str) -> Source:
+        """The primary stream behind `series.label`."""
+        owner, label = name.split(".")
+        node = self._entry(self._entry_named(owner, label, name), owner)
+        while not isinstance(node, Source):
+            node = node.inputs[0]
+        return node
+
+    def order(self, wanted: list[Any] | None = None) -> list[Any]:
+        """The nodes and sources that the wanted nodes need, inputs first."""
+        done: dict[int, Any] = {}
+
+        def visit(node: Any) -> None:
+            if id(node) not in done:
+                for part in node.inputs:
+                    visit(part)
+                done[id(node)] = node
+
+        for node in list(self.series.values()) if wanted is None else wanted:
+            visit(node)
+        return list(done.values())
+
+    def terms(self) -> Iterator[tuple[str, Node]]:
+        """Every labelled term of every series and shared body, as (`series.label`, node), in spec order."""
+        owners = {**self.spec.shared, **self.spec.series}
+        for owner, body in owners.items():
+            for entry in _walk(body.of):
+                node = self._entry(entry, owner)
+                while isinstance(node.term, Scaled):
+                    node = node.inputs[0]
+                yield f"{owner}.{entry.label or entry.kind}", node
+
+    @property
+    def portable(self) -> tuple[bool, str]:
+        """Whether every value is the same bits on every machine, and why not."""
+        for node in self.order():
+            part = node.law if isinstance(node, Source) else node.term
+            if not part.portable:
+                return False, f"{node.name}: {getattr(part, 'why_not_portable', '') or 'not portable'}"
+        return True, ""
+
+    # building
+
+    def _owner(self, name: str) -> Node:
+        if name not in self._owners:
+            body = self.spec.series.get(name) or self.spec.shared[name]
+            self._owners[name] = self._body(body.of, name, body.place)
+        return self._owners[name]
+
+    def _stream(self, owner: str) -> str:
+        return self.spec.series[owner].stream if owner in self.spec.series else owner
+
+    def _body(self, entries: tuple[Entry, ...], owner: str, place: Place) -> Node:
+        nodes = [self._entry(entry, owner) for entry in entries]
+        return nodes[0] if len(nodes) == 1 else self._node(Sum({}), owner, nodes, place)
+
+    def _entry(self, entry: Entry, owner: str) -> Node:
+        if id(entry) not in self._entries:
+            node = self._unscaled(entry, owner)
+            if entry.times != 1.0:
+                node = self._node(Scaled(entry.times), node.name, [node], entry.place)
+            self._entries[id(entry)] = node
+        return self._entries[id(entry)]
+
+    def _unscaled(self, entry: Entry, owner: str) -> Node:
+        if entry.kind == "use":
+            return self.resolve(entry.values["name"])
+        kind = catalogue()[entry.kind]
+        term = kind(entry.values)
+        name = f"{owner}.{entry.label or entry.kind}"
+        inputs: list[Any] = []
+        for body in entry.bodies.values():
+            if kind.separate:
+                inputs += [self._entry(part, owner) for part in body]
+            else:
+                inputs.append(self._body(body, owner, entry.place))
+        if kind.takes_shock:
+            noise = self._shock(entry, term, owner)
+            term.shock_scale = noise.term.scale()
+            inputs.append(noise)
+        inputs += [self._source(draw, owner, entry.label, name) for draw in term.draws()]
+        node = self._node(term, name, inputs, entry.place)
+        if kind.takes_shock:
+            self.filters[id(inputs[-1])] = node
+        return node
+
+    def _shock(self, entry: Entry, term: Term, owner: str) -> Node:
+        if entry.shock is not None:
+            return self._unscaled(entry.shock, owner)
+        noise = WhiteNoise({"sd": term.shock_sd(), "law": entry.values["law"]})
+        name = f"{owner}.{entry.label}"
+        sources = [self._source(draw, owner, entry.label, name) for draw in noise.draws()]
+        return self._node(noise, name, sources, entry.place)
+
+    def _source(self, draw: Any, owner: str, label: str, name: str) -> Source:
+        source = Source(name, Stream(self.spec.seed, self._stream(owner), label, draw.role), draw.law)
+        self.sources.append(source)
+        return source
+
+    def _node(self, term: Term, name: str, inputs: list[Any], place: Place) -> Node:
+        term.address, term.arity = name, len(inputs)
+        self._count += 1
+        return Node(f"{name}#{self._count}", name, term, tuple(inputs), place=place)
+
+    def _entry_named(self, owner: str, label: str, name: str) -> Entry:
+        body = self.spec.series.get(owner) or self.spec.shared[owner]
+        labels = {}
+        for entry in _walk(body.of):
+            labels.setdefault(entry.label or entry.kind, entry)
+        if label not in labels:
+            raise KeyError(f"expected one of {', '.join(labels)} in {owner}, got {label!r} in {name!r}")
+        return labels[label]
+
+    def _hidden_of(self, node: Node, output: str, name: str) -> Node:
+        while output not in node.term.outputs and node.term.takes_shock:
+            node = node.inputs[-1]  # a filter's shock answers to the filter's name
+        if output not in node.term.outputs:
+            known = ", ".join(node.term.outputs) or "none"
+            raise KeyError(f"expected a hidden output of {node.name} ({known}), got {output!r} in {name!r}")
+        if (id(node), output) not in self._hidden:
+            self._hidden[id(node), output] = self._node(Hidden(output), name, [node], node.place)
+        return self._hidden[id(node), output]
+
+    # chance and the past
+
+    def _correlate(self) -> None:
+        names, matrix = self.spec.correlation.names, np.array(self.spec.correlation.matrix, dtype=np.float64)
+        sources = [self.source_of(name) for name in names]
+        for linked in _components(matrix):
+            group = Group(tuple(sources[i] for i in linked), matrix[np.ix_(linked, linked)])
+            self.groups.append(group)
+            for source in group.sources:
+                source.group = group
+
+    def _plan(self) -> None:
+        """Decide which terms start jointly, and how far back everything must be drawn."""
+        wanted = [*self._owners.values()]
+        filters = set(map(id, self.filters.values()))
+        self._heads(wanted, passed=filters)
+        for sources in self._together():
+            self._start_together(sources)
+        self._heads(wanted, passed=set())
+        self._refuse_missing_past(wanted)
+
+    def _together(self) -> list[tuple[Source, ...]]:
+        lone = [(source,) for source in self.sources if source.group is None]
+        return [*lone, *(group.sources for group in self.groups)]
+
+    def _start_together(self, sources: tuple[Source, ...]) -> None:
+        noises = {id(n.inputs[0]): n for n in self.order([*self._owners.values()]) if _is_noise(n)}
+        nodes, members, chosen = [], [], []
+        for i, source in enumerate(sources):
+            noise = noises.get(id(source))
+            if noise is None:
+                continue
+            node = self.filters.get(id(noise), noise)
+            past = node.term.stationary() if hasattr(node.term, "stationary") else None
+            if past is None and noise.head == 0:
+                continue
+            gaussian = isinstance(noise.term, WhiteNoise) and source.law.gaussian
+            nodes.append((node, gaussian, source))
+            members.append(past if past is not None else noise.term.as_member())
+            chosen.append(i)
+        if not any(m is not None and m.phi for m in members) or not all(exact for _, exact, _ in nodes):
+            return
+        matrix = sources[0].group.matrix if sources[0].group else np.ones((1, 1))
+        joint = JointStart(members, matrix[np.ix_(chosen, chosen)])
+        for i, (node, _, _) in enumerate(nodes):
+            node.joint = (joint, i, tuple(source for _, _, source in nodes))
+
+    def _heads(self, wanted: list[Node], passed: set[int]) -> None:
+        order = self.order(wanted)
+        for node in order:
+            node.head = 0
+        for node in reversed(order):
+            if isinstance(node, Source) or id(node) in passed or node.joint is not None:
+                continue
+            for part, need in zip(node.inputs, node.term.reach(node.head), strict=False):
+                part.head = max(part.head, need)
+
+    def _refuse_missing_past(self, wanted: list[Node]) -> None:
+        faults = []
+        for node in self.order(wanted):
+            if isinstance(node, Source):
+                continue
+            known = node.term.past()
+            if known is not None and node.head > known:
+                faults.append(
+                    Fault(
+                        node.place,
+                        f"something reads {node.name} {node.head} steps before step 0, and `before` gives "
+                        f"{known}; give {node.head} values there, or lag less",
+                    )
+                )
+        if faults:
+            raise SpecError(tuple(faults))
+
+
+def build(spec: Spec) -> Graph:
+    """The graph of a checked spec."""
+    return Graph(spec)
+
+
+NORMAL = Normal()
+
+
+def _is_noise(node: Any) -> bool:
+    return isinstance(node, Node) and node.term.noise
+
+
+def _walk(entries: tuple[Entry, ...]) -> Iterator[Entry]:
+    for entry in entries:
+        yield entry
+        if entry.shock is not None:
+            yield from _walk((entry.shock,))
+        for body in entry.bodies.values():
+            yield from _walk(body)
+
+
+def _components(matrix: Array) -> list[list[int]]:
+    """Index sets linked by non-zero correlations, each in order, singletons left out."""
+    left, found = list(range(len(matrix))), []
+    while left:
+        linked = {left[0]}
+        while True:
+            more = {j for i in linked for j in left if matrix[i, j] != 0.0} | linked
+            if more == linked:
+                break
+            linked = more
+        left = [i for i in left if i not in linked]
+        if len(linked) > 1:
+            found.append(sorted(linked))
+    return found

@@ -1,0 +1,98 @@
+"""Deterministic levels: a constant, and a trend with slope, curvature and bends."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from procgen.spec.declare import Moment, Parameter, Real, Records
+from procgen.terms.base import Ahead, Array, Term, number, signed
+
+
+class Known(Term):
+    """A term that is a function of the step alone: subclasses give `at`, everything else follows."""
+
+    def at(self, steps: Array) -> Array:
+        """Values at integer steps, which may be negative; same shape."""
+        raise NotImplementedError
+
+    def begin(self, before):
+        return self.at(np.arange(-before.head, 0))[:, None], {}
+
+    def recurse(self, inputs, state, at):
+        return self.at(at)[:, None], state
+
+    def ahead(self, steps, state, *inputs):
+        mean = self.at(steps)[:, None]
+        return Ahead(mean, np.zeros_like(mean))
+
+    def moments(self, axis, *inputs):
+        return axis.known(self.at)
+
+
+class Constant(Known):
+    kind = "constant"
+    family = "level and shape"
+    purpose = "the same value at every step"
+    source = "common practice, no source"
+    example = "constant: 12.5"
+    knows = "mean; no variance"
+    short = "level"
+    parameters = (Parameter("level", "c", Real(), "the value", unit="series"),)
+
+    def at(self, steps):
+        return np.full(steps.shape, float(self.level))
+
+    def equation(self, *inputs):
+        return f"x[t] = {number(self.level)}"
+
+    def moments(self, axis, *inputs):
+        return axis.known(self.at, constant=True)
+
+
+class Trend(Known):
+    kind = "trend"
+    family = "level and shape"
+    purpose = "a straight, curved or bent line"
+    source = "common practice, no source"
+    example = "trend: {level: 310, slope: 0.02, bends: [{at: 500, slope: -0.01}]}"
+    knows = "mean; no variance"
+    parameters = (
+        Parameter("level", "c", Real(), "value at step 0", default=0.0, unit="series"),
+        Parameter("slope", "b", Real(), "change a step", default=0.0, unit="series", per="rate"),
+        Parameter("quadratic", "q", Real(), "coefficient of t²", default=0.0, unit="series/step²"),
+        Parameter(
+            "bends",
+            "",
+            Records(
+                Parameter("at", "τ", Moment(), "the step or date from which the new slope holds"),
+                Parameter("slope", "b", Real(), "the slope from there on", unit="series", per="rate"),
+            ),
+            "points where the slope changes, in order",
+            default=(),
+        ),
+    )
+
+    @classmethod
+    def check(cls, values):
+        places = [bend["at"] for bend in values["bends"]]
+        if any(later <= earlier for earlier, later in zip(places, places[1:], strict=False)):
+            yield "bends", "expected bends in order of time, each later than the one before; sort them by `at`"
+
+    def at(self, steps):
+        t = steps.astype(np.float64)
+        x = self.level + self.slope * t + self.quadratic * (t * t)
+        slope = self.slope
+        for bend in self.bends:
+            x = x + (bend["slope"] - slope) * np.maximum(t - bend["at"], 0.0)
+            slope = bend["slope"]
+        return x
+
+    def equation(self, *inputs):
+        text = f"x[t] = {number(self.level)} {signed(self.slope, 't')}"
+        if self.quadratic:
+            text += f" {signed(self.quadratic, 't²')}"
+        slope = self.slope
+        for bend in self.bends:
+            text += f" {signed(bend['slope'] - slope, f'max(0, t − {number(bend["at"])})')}"
+            slope = bend["slope"]
+        return text

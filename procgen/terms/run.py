@@ -1,0 +1,177 @@
+"""Values of a graph, tile after tile of steps, for a range of paths.
+
+A `Run` is a pure function of the graph and the range: how its steps are cut into tiles changes nothing.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import Any
+
+import numpy as np
+
+from procgen.chance.streams import Stream
+from procgen.terms.base import Array, Before, Node, State
+from procgen.terms.combine import Hidden
+from procgen.terms.graph import NORMAL, Graph, Group, Source
+from procgen.terms.start import weigh
+
+
+class Run:
+    """Draws the paths first_path … first_path + paths − 1 of a graph, from step 0 on.
+
+    Parameters
+    ----------
+    graph : Graph
+    first_path, paths : int
+        The range of paths, each drawn as it would be in any other range.
+    reveal : sequence of str
+        Names `series.label` or `series.label.output` to give beside the series.
+    """
+
+    def __init__(self, graph: Graph, first_path: int, paths: int, reveal: Sequence[str] = ()):
+        self.graph, self.first_path, self.paths = graph, first_path, paths
+        self.step = 0
+        self.columns: dict[str, Node] = {**graph.series, **{name: graph.resolve(name) for name in reveal}}
+        self._order = graph.order(list(self.columns.values()))
+        self._states: dict[str, State] = {}
+        self._begun: dict[int, Any] = {}
+        self._joint: dict[int, list[tuple[Array, Array]]] = {}
+
+    def tile(self, steps: int) -> dict[str, Array]:
+        """The next `steps` steps of every series: name to float64 (steps, paths)."""
+        if not self._states:
+            self._begin()
+        at = np.arange(self.step, self.step + steps)
+        values, self._states = self._advance(self._order, at)
+        self.step += steps
+        return {
+            name: np.broadcast_to(values[id(node)], (steps, self.paths)) for name, node in self.columns.items()
+        }
+
+    def state(self) -> dict[str, Array]:
+        """The carried state after the last tile, flat, by name."""
+        return {f"{key}:{name}": rows for key, state in self._states.items() for name, rows in state.items()}
+
+    def state_of(self, node: Node) -> State:
+        """The carried state of one node, just before the next step."""
+        if not self._states:
+            self._begin()
+        return self._states[node.key]
+
+    def restore(self, step: int, state: dict[str, Array]) -> None:
+        """Go on from a state that `state()` gave after step `step` − 1 of the same paths."""
+        self._states = {node.key: {} for node in self._order if isinstance(node, Node)}
+        for name, rows in state.items():
+            key, _, part = name.rpartition(":")
+            self._states[key][part] = rows
+        self.step = step
+
+    # forward
+
+    def _advance(self, order: Sequence[Any], at: Array) -> tuple[dict[int, Array], dict[str, State]]:
+        values: dict[int, Any] = {}
+        hidden: dict[int, dict[str, Array]] = {}
+        states: dict[str, State] = {}
+        for node in order:
+            if isinstance(node, Source):
+                if id(node) not in values:
+                    self._draw(node, int(at[0]), len(at), values)
+            elif isinstance(node.term, Hidden):
+                values[id(node)] = hidden[id(node.inputs[0])][node.term.output]
+            else:
+                inputs = [values[id(part)] for part in node.inputs]
+                out, states[node.key] = node.term.recurse(inputs, self._states.get(node.key, {}), at)
+                if isinstance(out, dict):
+                    hidden[id(node)] = out
+                    out = out[""]
+                values[id(node)] = out
+        return values, {**self._states, **states}
+
+    def _draw(self, source: Source, first_step: int, steps: int, values: dict[int, Array]) -> None:
+        """Shocks of a source, and with it of every source whose normals it is mixed with."""
+        if source.group is None:
+            u = source.stream.uniforms(self.first_path, self.paths, first_step, steps)
+            values[id(source)] = source.law.shocks(u, out=u)
+        else:
+            for member, z in zip(source.group.sources, self._mixed(source.group, first_step, steps), strict=True):
+                values[id(member)] = z
+
+    def _mixed(self, group: Group, first_step: int, steps: int) -> list[Array]:
+        uniforms = [s.stream.uniforms(self.first_path, self.paths, first_step, steps) for s in group.sources]
+        normals = [NORMAL.shocks(u) for u in uniforms]
+        mixed = weigh(group.factor, normals)
+        leads = [np.count_nonzero(weights) == 1 for weights in group.factor]
+        # A leader's shocks come straight from its uniforms, so that being named moves nothing.
+        return [
+            s.law.shocks(u) if lead else s.law.shocks_from_normals(z)
+            for s, u, z, lead in zip(group.sources, uniforms, mixed, leads, strict=True)
+        ]
+
+    # before step 0
+
+    def _begin(self) -> None:
+        for node in self._order:
+            if isinstance(node, Source):
+                head = max(s.head for s in (node.group.sources if node.group else (node,)))
+                if head and id(node) not in self._begun:
+                    self._draw(node, -head, head, self._begun)
+            elif isinstance(node.term, Hidden):
+                self._begun[id(node)] = self._begun.get((id(node.inputs[0]), node.term.output))
+            else:
+                self._begin_node(node)
+        self._begun.clear()
+        self._joint.clear()
+
+    def _begin_node(self, node: Node) -> None:
+        before = Before(
+            head=node.head,
+            inputs=tuple(self._rows(part) for part in node.inputs),
+            peek=lambda i, node=node: self._peek(node.inputs[i]),
+            normals=lambda count, node=node: self._start_normals(self._source_below(node), 0, count),
+            joint=self._joint_rows(node) if node.joint else None,
+        )
+        values, state = node.term.begin(before)
+        if isinstance(values, dict):
+            self._begun.update({(id(node), name): rows for name, rows in values.items()})
+            values = values[""]
+        self._begun[id(node)] = values
+        self._states[node.key] = state
+
+    def _rows(self, part: Any) -> Array:
+        rows = self._begun.get(id(part))
+        return np.zeros((0, 1)) if rows is None else rows
+
+    def _peek(self, node: Any) -> Array:
+        values, _ = self._advance(self.graph.order([node]), np.array([0]))
+        return values[id(node)]
+
+    def _joint_rows(self, node: Node) -> tuple[Array, Array]:
+        joint, place, sources = node.joint
+        if id(joint) not in self._joint:
+            heads = [n.head for n in self._order if isinstance(n, Node) and n.joint and n.joint[0] is joint]
+            self._joint[id(joint)] = joint.draw(
+                [lambda first, count, s=s: self._past_normals(s, first, count) for s in sources],
+                [lambda first, count, s=s: self._start_normals(s, first, count) for s in sources],
+                max(heads),
+            )
+        return self._joint[id(joint)][place]
+
+    def _past_normals(self, source: Source, first: int, count: int) -> Array:
+        """A source's own normals at steps −1 − first, −2 − first, …, before any mixing."""
+        return self._normals(source.stream, -first - count, count)[::-1]
+
+    def _start_normals(self, source: Source, first: int, count: int) -> Array:
+        own = source.stream
+        return self._normals(Stream(own.seed, own.name, own.label, "start"), first, count)
+
+    def _normals(self, stream: Stream, first_step: int, steps: int) -> Array:
+        if not steps:
+            return np.zeros((0, self.paths))
+        u = stream.uniforms(self.first_path, self.paths, first_step, steps)
+        return NORMAL.shocks(u, out=u)
+
+    def _source_below(self, node: Any) -> Source:
+        while not isinstance(node, Source):
+            node = node.inputs[-1]
+        return node

@@ -1,0 +1,225 @@
+"""The stationary past of linear terms: which recursions have one, and how it is drawn exactly.
+
+A term's past is the vector m = (x[−1], …, x[−p], a[−1], …, a[−q]): its last values and shocks, newest
+first. For Gaussian shocks m is drawn from its exact covariance S = Σ AʲQA′ʲ through a Cholesky factor;
+terms with correlated shocks draw theirs from the joint S, in the order in which the correlation names
+them, so that a name appended moves nobody. What lies further back follows by regression on m, one step
+at a time, so that a deeper look back moves nothing either.
+
+Everything here makes values: only portable operations (see `procgen.chance.portable`).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from functools import cached_property
+
+import numpy as np
+
+from procgen.chance.portable import cholesky, matmul
+
+Array = np.ndarray
+NEGLIGIBLE = 1e-12
+
+
+def partial_autocorrelations(phi: Sequence[float]) -> list[float] | None:
+    """The partial autocorrelations of an AR polynomial by step-down; None unless all lie inside (−1, 1).
+
+    Source: Durbin (1960); Barndorff-Nielsen & Schou (1973): the recursion has a causal stationary
+    solution exactly when every one of them is inside the unit interval.
+    """
+    a = [float(c) for c in phi]
+    partials: list[float] = []
+    while a:
+        k = a[-1]
+        if not -1.0 < k < 1.0:
+            return None
+        partials.append(k)
+        scale = 1.0 - k * k
+        a = [(a[i] + k * a[len(a) - 2 - i]) / scale for i in range(len(a) - 1)]
+    return partials[::-1]
+
+
+def companion(phi: Sequence[float], theta: Sequence[float], depth_x: int, depth_a: int) -> tuple[Array, Array]:
+    """Transition A and shock loading b of m = (x lags, a lags): m[t] = A m[t−1] + b a[t]."""
+    n = depth_x + depth_a
+    a, b = np.zeros((n, n)), np.zeros(n)
+    a[0, : len(phi)] = phi
+    a[0, depth_x : depth_x + len(theta)] = theta
+    for i in range(1, depth_x):
+        a[i, i - 1] = 1.0
+    for i in range(1, depth_a):
+        a[depth_x + i, depth_x + i - 1] = 1.0
+    b[0] = 1.0
+    if depth_a:
+        b[depth_x] = 1.0
+    return a, b
+
+
+def stationary_cross(a: Array, q: Array, b: Array) -> Array:
+    """Σ_j aʲ q b′ʲ by doubling: S ← S + a S b′, a ← a², b ← b²."""
+    total = q
+    while True:
+        added = matmul(matmul(a, total), b.T.copy())
+        total = total + added
+        if np.max(np.abs(added)) <= 2.0**-60 * np.max(np.abs(total)):
+            return total
+        a, b = matmul(a, a), matmul(b, b)
+
+
+def decay_length(a: Array, negligible: float = NEGLIGIBLE) -> int:
+    """The smallest n (to a power of two times three quarters) with every |Aⁿ| entry negligible."""
+    powers, n = [a], 1
+    while np.max(np.abs(powers[-1])) > negligible:
+        powers.append(matmul(powers[-1], powers[-1]))
+        n *= 2
+        if n > 2**26:
+            raise ValueError("the recursion forgets its start too slowly for a burn-in (over 6e7 steps)")
+    if n >= 4:
+        three_quarters = matmul(powers[-2], powers[-3])
+        if np.max(np.abs(three_quarters)) <= negligible:
+            return n // 4 * 3
+    return n
+
+
+@dataclass(frozen=True)
+class Member:
+    """One linear term in a joint start: its recursion, and its shock's standard deviation."""
+
+    phi: tuple[float, ...]
+    theta: tuple[float, ...]
+    sd: float
+
+    @property
+    def p(self) -> int:
+        return max(1, len(self.phi))
+
+    @property
+    def q(self) -> int:
+        return len(self.theta)
+
+
+class JointStart:
+    """The joint stationary past of terms whose Gaussian shocks have the correlation matrix R.
+
+    `normals` are taken per member: q of its own shocks before step 0, then p of its role ``start``.
+    """
+
+    def __init__(self, members: Sequence[Member], correlation: Array):
+        self.members = tuple(members)
+        self.correlation = np.asarray(correlation, dtype=np.float64)
+
+    def _covariance(self, extra: int) -> tuple[Array, list[int], list[int]]:
+        """S of all members to `extra` more depth; the indices of the core, and of the newest-first rest."""
+        depths = [(m.p + extra, m.q + extra if m.q else 0) for m in self.members]
+        systems = [
+            companion(m.phi, m.theta, *depth) for m, depth in zip(self.members, depths, strict=True)
+        ]
+        offsets = np.concatenate([[0], np.add.accumulate([p + q for p, q in depths])])
+        s = np.zeros((offsets[-1], offsets[-1]))
+        for i, (ai, bi) in enumerate(systems):
+            for j, (aj, bj) in enumerate(systems[: i + 1]):
+                scale = self.correlation[i, j] * self.members[i].sd * self.members[j].sd
+                if scale == 0.0:
+                    continue
+                block = stationary_cross(ai, scale * (bi[:, None] * bj[None, :]), aj)
+                s[offsets[i] : offsets[i + 1], offsets[j] : offsets[j + 1]] = block
+                s[offsets[j] : offsets[j + 1], offsets[i] : offsets[i + 1]] = block.T
+        core, rest = [], []
+        for m, (px, qa), o in zip(self.members, depths, offsets, strict=False):
+            o = int(o)
+            core += [o + px + k for k in range(m.q)] + [o + k for k in range(m.p)]
+            rest += [o + m.p + k for k in range(px - m.p)] + [o + px + m.q + k for k in range(qa - m.q)]
+        return s, core, rest
+
+    @cached_property
+    def factor(self) -> Array:
+        """Lower factor of the core covariance: rows are each member's shocks, then its values."""
+        s, core, _ = self._covariance(0)
+        return cholesky(s[np.ix_(core, core)])
+
+    @cached_property
+    def further(self) -> tuple[Array, Array]:
+        """Weights on the core, and the factor of what is new, for one more step back."""
+        s, core, rest = self._covariance(1)
+        order = core + rest
+        whole = cholesky(s[np.ix_(order, order)])
+        n = len(core)
+        return _solve_right(whole[:n, :n], whole[n:, :n]), whole[n:, n:]
+
+    def variance(self, index: int = 0) -> float:
+        """The stationary variance of one member's values."""
+        member = self.members[index]
+        a, b = companion(member.phi, member.theta, member.p, member.q)
+        s = stationary_cross(a, member.sd * member.sd * (b[:, None] * b[None, :]), a)
+        return float(s[0, 0])
+
+    def settle(self, z: Sequence[Array]) -> Array:
+        """The one member's past values, newest first, from its scaled shocks and then its start normals."""
+        return np.array(weigh(self.factor, z)[self.members[0].q :])
+
+    def draw(self, shocks, starts, head: int) -> list[tuple[Array, Array]]:
+        """Each member's past values (at least p, at least `head`) and shocks (q), newest first.
+
+        Parameters
+        ----------
+        shocks, starts : sequences of callables, one a member
+            ``shocks[i](first, count)`` and ``starts[i](first, count)`` give standard normals
+            (count, paths) at places first, first + 1, … counted backwards from step −1.
+        """
+        z = []
+        for i, m in enumerate(self.members):
+            z += [*shocks[i](0, m.q), *starts[i](0, m.p)]
+        core = weigh(self.factor, z)
+        xs, shock_rows, place = [], [], 0
+        for m in self.members:
+            shock_rows.append(core[place : place + m.q])
+            xs.append(core[place + m.q : place + m.q + m.p])
+            place += m.q + m.p
+        self._extend(xs, shock_rows, shocks, starts, head)
+        return [
+            (np.array(x), np.array(a[: m.q]) if m.q else np.zeros((0, x[0].shape[0])))
+            for x, a, m in zip(xs, shock_rows, self.members, strict=True)
+        ]
+
+    def _extend(self, xs, shock_rows, shocks, starts, head):
+        if head <= min(m.p for m in self.members):
+            return
+        weights, factor = self.further
+        for step in range(head - min(m.p for m in self.members)):
+            m, z = [], []
+            for i, member in enumerate(self.members):
+                m += [*shock_rows[i][step : step + member.q], *xs[i][step : step + member.p]]
+                z += [*starts[i](member.p + step, 1)]
+                z += [*shocks[i](member.q + step, 1)] if member.q else []
+            new = [w + n for w, n in zip(weigh(weights, m), weigh(factor, z), strict=True)]
+            for i, member in enumerate(self.members):
+                xs[i].append(new.pop(0))
+                if member.q:
+                    shock_rows[i].append(new.pop(0))
+
+
+def weigh(matrix: Array, vectors: Sequence[Array]) -> list[Array]:
+    """Rows Σ_j matrix[i, j]·vectors[j], added in order; exact zeros are passed over."""
+    out = []
+    for weights in matrix:
+        total = None
+        for w, v in zip(weights.tolist(), vectors, strict=True):
+            if w != 0.0:
+                total = w * v if total is None else total + w * v
+        out.append(np.zeros_like(vectors[0]) if total is None else total)
+    return out
+
+
+def _solve_right(lower: Array, rows: Array) -> Array:
+    """W with W·lower = rows, for a lower factor whose zero columns stand for what is already determined."""
+    w = np.zeros_like(rows)
+    for j in range(lower.shape[0] - 1, -1, -1):
+        if lower[j, j] == 0.0:
+            continue
+        rest = rows[:, j].copy()
+        for i in range(j + 1, lower.shape[0]):
+            rest = rest - w[:, i] * lower[i, j]
+        w[:, j] = rest / lower[j, j]
+    return w
