@@ -1,0 +1,272 @@
+"""The grid of steps and its calendar: stamps, lengths and moments in steps.
+
+Milliseconds to hours are absolute: a step has the same length on the day the clocks change. Days and up are
+local calendar: a step keeps its local clock time, and every stamp is computed from the start, never from the
+stamp before (31 January + 1 month is 28 or 29 February, + 2 months is 31 March).
+
+Where a calendar step falls on a local time that the change of clocks skips, it is read with the offset before
+the change (02:30 becomes 03:30); where a local time happens twice, it is the first, or the one whose offset
+`start` was written with. A whole day that a zone skipped (Samoa, 30 December 2011) shares its instant with the
+next.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from datetime import date, datetime, time, timedelta
+from fractions import Fraction
+from zoneinfo import ZoneInfo
+
+import numpy as np
+
+from procgen.spec.units import (
+    ABSOLUTE,
+    DAY,
+    DAYS,
+    LENGTH,
+    MICROSECOND,
+    MONTHS,
+    YEAR,
+    parse_clock,
+    parse_date,
+    parse_length,
+    shown,
+)
+
+LAST_YEAR = 9998  # one short of what a datetime can hold, for the ends of steps and for time zones
+_EPOCH = date(1970, 1, 1).toordinal()
+
+
+@dataclass(frozen=True)
+class Grid:
+    """The steps of a spec and, where `start` and `every` are given, when they are.
+
+    Parameters
+    ----------
+    steps : number of steps.
+    start : local date and time at which step 0 begins, without a time zone; its `fold` says which of two.
+    every : length of a step as (count, unit), the unit a key of `units.LENGTH`.
+    zone : name of the time zone; None is UTC.
+    stamp : "begin" or "end": which end of a step its stamp is.
+    holidays : days that are not business days, beside Saturdays and Sundays.
+    """
+
+    steps: int
+    start: datetime | None = None
+    every: tuple[int, str] | None = None
+    zone: str | None = None
+    stamp: str = "begin"
+    holidays: tuple[date, ...] = ()
+
+    def stamps(self, first_step: int, count: int) -> np.ndarray:
+        """Return the stamps of `count` steps from `first_step`: int64 (count,), µs of UTC since 1970.
+
+        Raises ValueError when the grid has no start.
+        """
+        if self.start is None or self.every is None:
+            raise ValueError("these steps have no stamps: the spec's time has no start")
+        first = first_step + (self.stamp == "end")
+        steps = np.arange(first, first + count, dtype=np.int64)
+        if self.every[1] in ABSOLUTE:
+            return steps * self._length + self._utc(self.start)
+        return self._calendar_utc(self._local(steps))
+
+    def last_year(self) -> int:
+        """Return the year in which the last step ends, to within a few days; needs a start."""
+        assert self.start is not None
+        return int(
+            self.start.year + Fraction(self.start.month - 1, 12) + Fraction(self.steps * self._length, YEAR)
+        )
+
+    def steps_per(self, unit: str) -> float:
+        """Return how many steps a unit such as `day` or `year` holds, on average; ValueError says why not.
+
+        A month is a twelfth of the Gregorian mean year of 365.2425 days, a business day 7/5 of a day.
+        """
+        count, name = parse_length(unit)
+        if name == "step":
+            return float(count)
+        if self.every is None:
+            raise ValueError(
+                f"per: {unit} needs the length of a step; give time: {{every: 1h, …}}, or write per: step"
+            )
+        return float(count * LENGTH[name] / self._length)
+
+    def span_steps(self, text: str) -> float:
+        """Return a length of time such as `1d` in steps; ValueError says why not.
+
+        Only lengths that are the same number of steps wherever they begin: on a grid of hours a day is 24
+        hours, and a month has no such number.
+        """
+        count, unit = parse_length(text)
+        if unit == "step":
+            return float(count)
+        if self.every is None:
+            need = "needs the length of a step; give time: {every: 1h, …}, or write a number of steps"
+            raise ValueError(f"{shown(text)} {need}")
+        step = self.every[1]
+        if _family(unit) != _family(step):
+            raise ValueError(
+                f"{_article(unit)} is no fixed number of steps of {self._every}; write a number of steps"
+            )
+        return float(count * LENGTH[unit] / self._length)
+
+    def moment_steps(self, text: str) -> float:
+        """Return a clock time on the day of the start, or a date (and time), in steps from step 0.
+
+        ValueError says why not. A date between two steps is a fraction of the step it lies in.
+        """
+        clock, moment = parse_clock(text), parse_date(text)
+        if clock is None and moment is None:
+            raise ValueError(
+                "expected a number of steps, a clock time such as 18:00, or a date such as 2027-01-04T06:00, "
+                f"got {shown(text)}"
+            )
+        if self.start is None or self.every is None:
+            raise ValueError(
+                f"{shown(text)} needs time: {{start: …, every: …}}; give them, or write a number of steps"
+            )
+        if clock is not None:
+            if _family(self.every[1]) != "day":
+                raise ValueError(
+                    f"a clock time is no point in steps of {self._every}; write a number of steps"
+                )
+            moment = datetime.combine(self.start.date(), clock)
+        assert moment is not None
+        return self._position(self.resolve(moment))
+
+    def resolve(self, moment: datetime) -> datetime:
+        """Return a moment as local time, `fold` set from a written offset; ValueError when that is wrong."""
+        if moment.tzinfo is None:
+            return moment
+        local, offset = moment.replace(tzinfo=None), moment.utcoffset()
+        for fold in (0, 1):
+            if timedelta(microseconds=self._offset(local, fold)) == offset:
+                return local.replace(fold=fold)
+        why = f"has an offset that {self.zone or 'UTC'} does not have then; leave the offset out"
+        raise ValueError(f"{moment.isoformat()} {why}")
+
+    def skipped(self, moment: datetime) -> bool:
+        """Return whether the change of clocks skips a local time."""
+        return self._offset(moment, 1) > self._offset(moment, 0)
+
+    @property
+    def _length(self) -> int:
+        assert self.every is not None
+        return self.every[0] * LENGTH[self.every[1]]
+
+    @property
+    def _every(self) -> str:
+        assert self.every is not None
+        return f"{self.every[0]} {self.every[1]}"
+
+    def _offset(self, moment: datetime, fold: int | None = None) -> int:
+        """Return the zone's offset from UTC at a local time, in microseconds."""
+        if self.zone is None:
+            return 0
+        offset = ZoneInfo(self.zone).utcoffset(moment if fold is None else moment.replace(fold=fold))
+        return 0 if offset is None else offset // MICROSECOND
+
+    def _utc(self, moment: datetime) -> int:
+        return _microseconds(moment) - self._offset(moment, 0 if self.skipped(moment) else None)
+
+    def _calendar_utc(self, local: np.ndarray) -> np.ndarray:
+        """Return UTC of local times that all have the clock time of the start."""
+        assert self.start is not None
+        if self.zone is None:
+            return local
+        days = (local // DAY + _EPOCH).tolist()
+        first = _offsets(self.zone, days, self.start.time(), 0)
+        if self.start.fold:  # the later of two times has the smaller offset, as has the one before a gap
+            first = np.minimum(first, _offsets(self.zone, days, self.start.time(), 1))
+        return local - first
+
+    def _local(self, steps: np.ndarray) -> np.ndarray:
+        """Return the local begin of calendar steps, in microseconds since 1970 by the local clock."""
+        assert self.start is not None and self.every is not None
+        count, unit = self.every
+        day = np.datetime64(self.start.date(), "D")
+        if unit in DAYS:
+            days = day.astype(np.int64) + steps * (count * DAYS[unit])
+        elif unit in MONTHS:
+            months = day.astype("datetime64[M]").astype(np.int64) + steps * (count * MONTHS[unit])
+            begin, end = _first_day(months), _first_day(months + 1)
+            days = begin + np.minimum(self.start.day - 1, end - begin - 1)
+        else:
+            holidays = np.array(self.holidays, dtype="datetime64[D]")
+            days = np.busday_offset(day, steps * count, holidays=holidays).astype(np.int64)
+        return days * DAY + _microseconds(self.start) % DAY
+
+    def _position(self, moment: datetime) -> float:
+        assert self.start is not None and self.every is not None
+        unit = self.every[1]
+        if unit in ABSOLUTE:
+            return float(Fraction(self._utc(moment) - self._utc(self.start), self._length))
+        if unit in DAYS:
+            return float(Fraction(_microseconds(moment) - _microseconds(self.start), self._length))
+        guess = int(Fraction(_microseconds(moment) - _microseconds(self.start), self._length))
+        near = np.arange(guess - 12, guess + 13) if unit in MONTHS else self._business_steps(moment)
+        stamps = self._local(near)
+        at = int(np.searchsorted(stamps, _microseconds(moment), side="right")) - 1
+        gone = Fraction(_microseconds(moment) - int(stamps[at]), int(stamps[at + 1] - stamps[at]))
+        return float(int(near[at]) + gone)
+
+    def _business_steps(self, moment: datetime) -> np.ndarray:
+        assert self.start is not None and self.every is not None
+        holidays = np.array(self.holidays, dtype="datetime64[D]")
+        days = np.busday_count(self.start.date(), moment.date(), holidays=holidays)
+        return np.arange(days // self.every[0] - 3, days // self.every[0] + 4)
+
+
+def tz_version() -> str | None:
+    """Return the version of the time zone database in use, such as "2025b", or None when it does not say."""
+    from importlib import metadata
+    from pathlib import Path
+    from zoneinfo import TZPATH
+
+    for folder in map(Path, TZPATH):
+        if (folder / "Europe").is_dir():
+            for name, take in _VERSIONS.items():
+                if (folder / name).is_file():
+                    with open(folder / name, encoding="utf-8") as file:
+                        return take(file.readline())
+            return None
+    try:
+        return metadata.version("tzdata")
+    except metadata.PackageNotFoundError:
+        return None
+
+
+_VERSIONS: dict[str, Callable[[str], str]] = {
+    "tzdata.zi": lambda line: line.removeprefix("# version").strip(),
+    "+VERSION": str.strip,
+}
+
+
+def _family(unit: str) -> str:
+    if unit in MONTHS:
+        return "month"
+    return "business day" if unit == "business day" else "day"
+
+
+def _article(unit: str) -> str:
+    return f"an {unit}" if unit == "h" else f"a {unit}"
+
+
+def _microseconds(moment: datetime) -> int:
+    """Return microseconds since 1970 by the local clock."""
+    return (moment.replace(tzinfo=None) - datetime(1970, 1, 1)) // MICROSECOND
+
+
+def _first_day(months: np.ndarray) -> np.ndarray:
+    return months.astype("datetime64[M]").astype("datetime64[D]").astype(np.int64)
+
+
+def _offsets(zone: str, days: list[int], clock: time, fold: int) -> np.ndarray:
+    """Return the zone's offsets at one local clock time of many days, in microseconds."""
+    at, offset, clock = date.fromordinal, ZoneInfo(zone).utcoffset, clock.replace(fold=fold)
+    # Few offsets occur in a zone, so each is divided out once: a million days take well under a second.
+    found = [offset(datetime.combine(at(day), clock)) for day in days]
+    size = {value: value // MICROSECOND for value in set(found) if value is not None}
+    return np.array([size[value] for value in found], dtype=np.int64)
