@@ -1,0 +1,12 @@
+#!/bin/sh
+# Runs every test: ruff, mypy, then pytest on two workers. Makes .venv first where that is needed.
+# Arguments go to pytest:  sh tests/run.sh -k garch
+set -eu
+cd "$(dirname "$0")/.."
+sh tests/venv.sh test
+
+failed=0
+.venv/bin/ruff check . || failed=1
+.venv/bin/mypy || failed=1
+.venv/bin/python -m pytest -n 2 "$@" || failed=1
+exit $failed
