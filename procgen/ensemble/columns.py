@@ -1,0 +1,83 @@
+"""What a column of an ensemble is, and how drawn values become stored ones."""
+
+from __future__ import annotations
+
+from dataclasses import asdict, dataclass
+from typing import Any
+
+import numpy as np
+
+from procgen.ensemble.errors import EnsembleError
+
+TYPES = {"float64": 8, "float32": 4, "int64": 8}
+EXACT = 2.0**52  # from here on a float64 has no fraction
+
+
+@dataclass(frozen=True)
+class Column:
+    """A value column: a series, or a revealed hidden output."""
+
+    name: str
+    type: str = "float64"
+    decimals: int | None = None
+    unit: str | None = None
+    revealed: bool = False
+
+    @property
+    def exact(self) -> bool:
+        """Whether stored values are the drawn ones."""
+        return self.type == "float64" and self.decimals is None
+
+    def json(self) -> dict[str, Any]:
+        return asdict(self)
+
+
+def store(values: np.ndarray, column: Column) -> np.ndarray:
+    """Drawn values (paths, steps) as they are stored; a new array, or the same when nothing changes.
+
+    With d decimals, rint(x·10^d)/10^d: the product is rounded to the nearest whole number, an exact half to
+    the even one, and the quotient is the double nearest to that decimal number. `int64` is rint; `float32`
+    is the nearest one. Zero is stored without a sign. These are single IEEE 754 operations, hence the same
+    everywhere.
+
+    Raises EnsembleError when a value does not fit the type.
+    """
+    if column.exact:
+        return values
+    kept = values if column.decimals is None else _rounded(values, column.decimals)
+    if column.type == "int64":
+        kept = np.rint(kept)
+        _refuse(np.abs(kept) >= 2.0**63, kept, column)
+        return kept.astype(np.int64)
+    if column.type == "float32":
+        with np.errstate(over="ignore"):
+            narrow = kept.astype(np.float32)
+        _refuse(np.isinf(narrow), kept, column)
+        return narrow
+    return kept
+
+
+def _rounded(values: np.ndarray, decimals: int) -> np.ndarray:
+    scale = 10.0 ** abs(decimals)  # a constant of the spec: exact up to 10^22
+    with np.errstate(over="ignore"):
+        scaled = values * scale if decimals >= 0 else values / scale
+    whole = np.abs(scaled) >= EXACT if decimals >= 0 else None
+    np.rint(scaled, out=scaled)
+    scaled = scaled / scale if decimals >= 0 else scaled * scale
+    scaled += 0.0
+    if whole is not None and whole.any():
+        scaled[whole] = values[whole]
+    return scaled
+
+
+def _refuse(bad: np.ndarray, values: np.ndarray, column: Column) -> None:
+    if bad.any():
+        raise EnsembleError(
+            f"series {column.name}: the value {values[bad][0]:g} does not fit type {column.type}; "
+            "use type: float64, or a spec whose values stay smaller"
+        )
+
+
+def as_float(values: np.ndarray) -> np.ndarray:
+    """Stored values as float64, exactly; this is what digests are over."""
+    return values if values.dtype == np.float64 else values.astype(np.float64)

@@ -1,0 +1,91 @@
+"""Values of a block, from runs: tiles (steps, paths) are turned into rows (paths, steps)."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+
+import numpy as np
+
+from procgen.ensemble.columns import Column
+from procgen.ensemble.errors import EnsembleError
+from procgen.ensemble.plan import Block, lanes, tiles
+from procgen.ensemble.source import Run, Source
+
+Tick = Callable[[int], None]  # called with the rows just drawn; may raise to stop the work
+State = dict[str, np.ndarray]
+
+
+class Drawer:
+    """Draws the blocks of one chain; keeps the run of each range of paths for the steps that follow."""
+
+    def __init__(self, source: Source, tick: Tick = lambda rows: None):
+        self.source, self.tick = source, tick
+        self._runs: dict[tuple[int, int], Run] = {}
+        self._states: dict[tuple[int, int], tuple[int, State]] = {}
+
+    def fill(self, batch: Block, out: Mapping[str, np.ndarray]) -> None:
+        """Draw `batch` into arrays (paths, steps), one a column.
+
+        Raises EnsembleError when a value is not finite, naming series, path and step.
+        """
+        for block in lanes(batch):
+            rows = slice(block.first_path - batch.first_path, block.end_path - batch.first_path)
+            self._rows(block, {name: values[rows] for name, values in out.items()})
+
+    def _rows(self, block: Block, out: Mapping[str, np.ndarray]) -> None:
+        run, step = self._run(block), block.first_step
+        for steps in tiles(block.steps, block.paths, len(self.source.columns)):
+            with np.errstate(all="ignore"):  # what is not finite is refused below, with its place
+                tile = run.tile(steps)
+            start = step - block.first_step
+            for column in self.source.columns:
+                values = tile[column.name]
+                if not np.isfinite(values).all():
+                    raise _not_finite(column, values, block.first_path, step)
+                out[column.name][:, start : start + steps] = values.T
+            step += steps
+            self.tick(block.paths * steps)
+
+    def _run(self, block: Block) -> Run:
+        key = (block.first_path, block.paths)
+        if key not in self._runs:
+            self._runs[key] = self.source.run(*key)
+            if key in self._states:
+                self._runs[key].restore(*self._states.pop(key))
+            elif block.first_step:
+                raise EnsembleError(f"no state to go on from before {block}; draw its chain from step 0")
+        return self._runs[key]
+
+    def forget(self) -> None:
+        """Drop the runs; to be called when they have reached the last step."""
+        self._runs.clear()
+
+    def state(self) -> State:
+        """The carried state of every run, as named arrays."""
+        return {
+            f"{first}:{paths}:{name}": values
+            for (first, paths), run in self._runs.items()
+            for name, values in run.state().items()
+        } | {f"{first}:{paths}:": np.empty(0) for first, paths in self._runs}
+
+    def restore(self, step: int, state: Mapping[str, np.ndarray]) -> None:
+        """Take up a state that `state` gave after `step` steps."""
+        for key, values in state.items():
+            first, paths, name = key.split(":", 2)
+            states = self._states.setdefault((int(first), int(paths)), (step, {}))[1]
+            if name:
+                states[name] = values
+
+
+def _not_finite(column: Column, values: np.ndarray, first_path: int, first_step: int) -> EnsembleError:
+    step, path = np.argwhere(~np.isfinite(values))[0]
+    return EnsembleError(
+        f"series {column.name}: the value at path {first_path + path}, step {first_step + step} is "
+        f"{values[step, path]}, not a finite number; the process explodes or overflows there: "
+        "ask for fewer steps, or make it stationary"
+    )
+
+
+def empty(block: Block, columns: list[Column]) -> dict[str, np.ndarray]:
+    """Arrays (paths, steps) float64 to draw a block into."""
+    return {column.name: np.empty((block.paths, block.steps)) for column in columns}

@@ -1,0 +1,180 @@
+"""Who draws the chains: this process alone, or this process and worker processes beside it.
+
+Workers are plain child processes that read tasks and write records as lines of JSON. So a caller's script
+needs no `if __name__ == "__main__"`, nothing is forked under running threads, and no pickle is read. The
+calling process draws too: while workers import (0.2 s) it is already at work.
+"""
+
+from __future__ import annotations
+
+import json
+import os
+import subprocess
+import sys
+import threading
+from collections import deque
+from collections.abc import Callable, Sequence
+from typing import Any
+
+from procgen.ensemble.errors import EnsembleError
+from procgen.ensemble.part import Task, render_chain
+
+Progress = Callable[[int, int], None]  # (rows drawn so far, rows in all)
+WORTH = 2_000_000  # values that repay one more process
+
+
+def processors() -> int:
+    """Processors that this process may use."""
+    affinity = getattr(os, "sched_getaffinity", None)
+    return len(affinity(0)) if affinity else os.cpu_count() or 1
+
+
+def default_workers(values: int) -> int:
+    """Processes worth starting for so many values."""
+    return max(1, min(processors(), values // WORTH)) if sys.executable else 1
+
+
+class Stopped(Exception):
+    """Another process has failed; this one's work is of no more use."""
+
+
+class Crew:
+    """The state that the calling process and its workers' threads share."""
+
+    def __init__(self, tasks: Sequence[Task], progress: Progress | None, done: int, rows: int):
+        self.waiting = deque(tasks)
+        self.records: list[dict[str, Any]] = []
+        self.error: BaseException | None = None
+        self._progress, self._done, self._rows = progress, done, rows
+        self._lock = threading.Lock()
+
+    def tick(self, rows: int) -> None:
+        """Count rows, in any thread; stops the work of the calling thread when another has failed."""
+        with self._lock:
+            self._done += rows
+        if self.error is not None:
+            raise Stopped
+        if self._progress is not None and threading.current_thread() is threading.main_thread():
+            self.show()
+
+    def show(self) -> None:
+        if self._progress is not None:
+            self._progress(self._done, self._rows)
+
+    def next(self) -> Task | None:
+        with self._lock:
+            return self.waiting.popleft() if self.waiting and self.error is None else None
+
+    def keep(self, records: list[dict[str, Any]]) -> None:
+        with self._lock:
+            self.records += records
+
+    def fail(self, error: BaseException) -> None:
+        with self._lock:
+            self.error = self.error or error
+
+
+def run(
+    tasks: Sequence[Task],
+    workers: int = 1,
+    progress: Progress | None = None,
+    done: int = 0,
+    rows: int = 0,
+    inherit: int | None = None,
+) -> list[dict[str, Any]]:
+    """Draw all tasks with `workers` processes, this one included; the records of their parts.
+
+    `inherit` is a file descriptor that workers hold as long as they live. Raises EnsembleError of the first
+    chain that failed, or when a worker died; KeyboardInterrupt passes through after the workers have ended.
+    """
+    crew = Crew(tasks, progress, done, rows)
+    helpers = [Helper(crew, inherit) for _ in range(min(workers, len(tasks)) - 1)]
+    try:
+        while (task := crew.next()) is not None:
+            crew.keep(render_chain(task, crew.tick))
+        while crew.error is None and any(helper.is_alive() for helper in helpers):
+            for helper in helpers:
+                helper.join(0.05)
+            crew.show()
+    except Stopped:
+        pass
+    except BaseException as error:
+        crew.fail(error)
+        raise
+    finally:
+        for helper in helpers:
+            helper.end()
+    if crew.error is not None:
+        raise crew.error
+    return crew.records
+
+
+class Helper(threading.Thread):
+    """Feeds one worker process with tasks, and takes its ticks, records and errors."""
+
+    def __init__(self, crew: Crew, inherit: int | None):
+        super().__init__(daemon=True)
+        self.crew = crew
+        self.process = subprocess.Popen(
+            [sys.executable, "-P", "-c", "from procgen.ensemble.worker import main; main()"],
+            stdin=subprocess.PIPE,
+            stdout=subprocess.PIPE,
+            text=True,
+            encoding="utf-8",
+            env={**os.environ, "PYTHONPATH": os.pathsep.join(path or os.getcwd() for path in sys.path)},
+            pass_fds=() if inherit is None else (inherit,),
+        )
+        self.start()
+
+    def run(self) -> None:
+        try:
+            while (task := self.crew.next()) is not None:
+                self._send(task)
+                self.crew.keep(self._receive())
+        except Stopped:
+            pass
+        except BaseException as error:
+            self.crew.fail(error)
+        finally:
+            self._close()
+
+    def _send(self, task: Task) -> None:
+        assert self.process.stdin is not None
+        try:
+            self.process.stdin.write(json.dumps(task.json()) + "\n")
+            self.process.stdin.flush()
+        except OSError:
+            pass  # it is dead, and `_receive` says so
+
+    def _receive(self) -> list[dict[str, Any]]:
+        assert self.process.stdout is not None
+        for line in self.process.stdout:
+            message = json.loads(line)
+            if "rows" in message:
+                self.crew.tick(message["rows"])
+            elif "error" in message:
+                raise EnsembleError(message["error"])
+            else:
+                return message["records"]
+        code = self.process.wait()
+        how = f"killed by signal {-code}" if code < 0 else f"exit code {code}"
+        raise EnsembleError(
+            f"a worker process died ({how}); signal 9 is often a lack of memory: "
+            "use fewer --workers, then go on with --resume"
+        )
+
+    def _close(self) -> None:
+        assert self.process.stdin is not None
+        try:
+            self.process.stdin.close()
+        except OSError:
+            pass
+
+    def end(self) -> None:
+        """Wait for the process; one that is still drawing is ended first, and cleans up by itself."""
+        if self.is_alive():
+            self.process.terminate()
+        self.join()
+        self.process.wait()
+        assert self.process.stdout is not None
+        self.process.stdout.close()

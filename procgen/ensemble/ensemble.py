@@ -1,0 +1,217 @@
+"""An ensemble to read from: on disk or in memory, the same calls and the same values."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping, Sequence
+from functools import cached_property
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from procgen.ensemble import digest, parquet
+from procgen.ensemble.columns import Column, as_float
+from procgen.ensemble.errors import EnsembleError
+from procgen.ensemble.manifest import Manifest, bytes_text
+from procgen.ensemble.plan import Block
+from procgen.ensemble.source import read_spec
+from procgen.ensemble.store import MANIFEST, Folder
+
+if TYPE_CHECKING:
+    import pandas as pd
+    import pyarrow as pa
+
+Blocks = Iterator[tuple[Block, dict[str, np.ndarray]]]
+
+
+class Ensemble:
+    """All paths of a spec, or a range of them.
+
+    ``ens["load_kw"]`` is a (paths, steps) float64 array in the series' unit. `names` lists the columns:
+    the series of the spec, then what was revealed. `whole` is the range of paths and steps that is here;
+    paths keep their numbers, so row 0 of an array is path ``whole.first_path``.
+    """
+
+    def __init__(self, columns: Sequence[Column], whole: Block, stamps: Any = None):
+        self.columns = tuple(columns)
+        self.whole = whole
+        self._stamps = stamps
+
+    # what is here
+
+    @property
+    def names(self) -> tuple[str, ...]:
+        return tuple(column.name for column in self.columns)
+
+    @property
+    def spec(self) -> Any:
+        """The Spec that the values follow."""
+        raise NotImplementedError
+
+    @property
+    def digest(self) -> str:
+        """The digest of the stored values (64 hex digits)."""
+        raise NotImplementedError
+
+    def stored(self, first_path: int | None = None, end_path: int | None = None) -> Blocks:
+        """Blocks in row order with values as stored, of the paths first_path … end_path − 1."""
+        raise NotImplementedError
+
+    def blocks(self) -> Iterator[tuple[int, int, dict[str, np.ndarray]]]:
+        """(first_path, first_step, {name: (paths, steps) float64}) in row order, in bounded memory.
+
+        The arrays may be views of the ensemble and must not be written to. Raises EnsembleError where a part
+        is damaged or its rows are not the paths and steps that belong there.
+        """
+        for block, values in self.stored():
+            yield block.first_path, block.first_step, {name: as_float(v) for name, v in values.items()}
+
+    def times(self) -> np.ndarray | None:
+        """The stamps of the steps as datetime64[us] in UTC, or None when the spec has no start."""
+        if self._stamps is None:
+            return None
+        return np.asarray(self._stamps(self.whole.first_step, self.whole.steps)).astype("datetime64[us]")
+
+    # values
+
+    def __contains__(self, name: object) -> bool:
+        return name in self.names
+
+    def __getitem__(self, name: str) -> np.ndarray:
+        """All values of a column, (paths, steps) float64; KeyError names the columns there are."""
+        if name not in self.names:
+            raise KeyError(f"expected one of {', '.join(self.names)}, got {name!r}")
+        return self._gather((name,), self.whole.first_path, self.whole.end_path)[name]
+
+    def paths(self, first: int, end: int) -> Memory:
+        """The paths first … end − 1, by their numbers in the ensemble, as an ensemble in memory.
+
+        Raises EnsembleError when some of them are not here.
+        """
+        if not self.whole.first_path <= first < end <= self.whole.end_path:
+            raise EnsembleError(
+                f"expected paths within {self.whole.first_path} to {self.whole.end_path} (its end is not "
+                f"included), got {first} to {end}"
+            )
+        whole = Block(first, end - first, self.whole.first_step, self.whole.steps)
+        return Memory(self._gather(self.names, first, end, stored=True), self.columns, whole, self._stamps, self)
+
+    def _gather(self, names: Sequence[str], first: int, end: int, stored: bool = False) -> dict[str, np.ndarray]:
+        types = {c.name: np.dtype(c.type if stored else np.float64) for c in self.columns if c.name in names}
+        out = {name: np.empty((end - first, self.whole.steps), kind) for name, kind in types.items()}
+        for block, values in self.stored(first, end):
+            a, b = max(block.first_path, first), min(block.end_path, end)
+            steps = slice(block.first_step - self.whole.first_step, block.end_step - self.whole.first_step)
+            for name in out:
+                rows = values[name][a - block.first_path : b - block.first_path]
+                out[name][a - first : b - first, steps] = rows
+        return out
+
+    def to_arrow(self) -> pa.Table:
+        """A table of the long layout: path, step, time (where the spec has a start), then the columns."""
+        import pyarrow as pa
+
+        schema = parquet.schema(self.columns, self._stamps is not None)
+        index = parquet.Index(self._stamps)
+        tables = [parquet.table(schema, index, self.columns, block, values) for block, values in self.stored()]
+        return pa.concat_tables(tables)
+
+    def to_pandas(self) -> pd.DataFrame:
+        """A frame of the long layout, as `to_arrow` gives it."""
+        return self.to_arrow().to_pandas()
+
+    def __repr__(self) -> str:
+        size = bytes_text(sum(np.dtype(c.type).itemsize for c in self.columns) * self.whole.rows)
+        what = f"{self.whole.paths} paths × {self.whole.steps} steps from path {self.whole.first_path}"
+        return f"<Ensemble of {', '.join(self.names)}: {what}, {size} of values>"
+
+
+class Memory(Ensemble):
+    """An ensemble whose values are arrays in memory."""
+
+    def __init__(
+        self, values: Mapping[str, np.ndarray], columns: Sequence[Column], whole: Block, stamps: Any, origin: Any
+    ):
+        super().__init__(columns, whole, stamps)
+        self._values = values
+        self._origin = origin  # the ensemble or source that knows the spec
+
+    manifest = None
+
+    @property
+    def spec(self) -> Any:
+        return self._origin.spec
+
+    @cached_property
+    def digest(self) -> str:
+        roots = {}
+        for column in self.columns:
+            if not column.revealed:
+                leaves = digest.Leaves(self.whole)
+                leaves.add(self.whole.first_path, self.whole.first_step, as_float(self._values[column.name]))
+                roots[column.name] = digest.root([(self.whole, leaves.nodes(self.whole))], self.whole)
+        return digest.total(roots)
+
+    def stored(self, first_path: int | None = None, end_path: int | None = None) -> Blocks:
+        first = self.whole.first_path if first_path is None else first_path
+        end = self.whole.end_path if end_path is None else end_path
+        wanted = Block(first, end - first, self.whole.first_step, self.whole.steps)
+        for block in parquet.cut(wanted, parquet.GROUP_ROWS):
+            rows = slice(block.first_path - self.whole.first_path, block.end_path - self.whole.first_path)
+            steps = slice(block.first_step - self.whole.first_step, block.end_step - self.whole.first_step)
+            yield block, {name: values[rows, steps] for name, values in self._values.items()}
+
+
+class OnDisk(Ensemble):
+    """An ensemble in a folder, read part by part."""
+
+    def __init__(self, path: Path, manifest: Manifest, spec: Any = None):
+        self.path, self.manifest = path, manifest
+        self._spec = spec
+        super().__init__(manifest.columns, manifest.whole)
+        self._stamps = self.spec.time.stamps if manifest.time is not None else None
+
+    @property
+    def spec(self) -> Any:
+        if self._spec is None:
+            self._spec = read_spec(self.manifest.raw)
+        return self._spec
+
+    @property
+    def digest(self) -> str:
+        return self.manifest.digest
+
+    def stored(self, first_path: int | None = None, end_path: int | None = None) -> Blocks:
+        first = self.whole.first_path if first_path is None else first_path
+        end = self.whole.end_path if end_path is None else end_path
+        for part in self.manifest.parts:
+            if part.block.end_path > first and part.block.first_path < end:
+                yield from parquet.read(self.path / part.file, part.block, self.columns, self._stamps, first, end)
+
+
+def open_ensemble(path: str | Path) -> OnDisk:
+    """The ensemble in a folder that `render` has finished; reads only its manifest.
+
+    Raises EnsembleError when there is none, when it is unfinished, or when parts are missing.
+    """
+    folder = Folder(Path(path))
+    data = folder.read_json(MANIFEST)
+    if data is None:
+        unfinished = (folder.state / "plan.json").exists()
+        raise EnsembleError(
+            f"{path} is an unfinished ensemble; go on with: procgen render SPEC -o {path} --resume"
+            if unfinished
+            else f"{path} has no {MANIFEST}; expected a folder that procgen render has made"
+        )
+    manifest = Manifest.read(data, str(folder.path / MANIFEST))
+    refuse_missing(folder, manifest)
+    return OnDisk(Path(path), manifest)
+
+
+def refuse_missing(folder: Folder, manifest: Manifest) -> None:
+    """EnsembleError naming the first part that is missing or has another size than the manifest says."""
+    for part in manifest.parts:
+        size = folder.size(part.file)
+        if size != part.bytes:
+            what = "is missing" if size < 0 else f"is damaged: {size} bytes, expected {part.bytes}"
+            raise EnsembleError(f"{folder.path / part.file} {what}; draw it again with --resume")

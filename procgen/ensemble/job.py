@@ -1,0 +1,335 @@
+"""From a spec to an ensemble: what is there already, what must be drawn, who draws it, and the manifest."""
+
+from __future__ import annotations
+
+import shutil
+from collections.abc import Mapping, Sequence
+from dataclasses import asdict, dataclass
+from itertools import groupby
+from pathlib import Path
+from typing import Any
+
+from procgen.chance.streams import STREAM_VERSION
+from procgen.ensemble import engines, manifest, parquet
+from procgen.ensemble.columns import TYPES, store
+from procgen.ensemble.draw import Drawer, empty
+from procgen.ensemble.engines import Progress
+from procgen.ensemble.ensemble import Ensemble, Memory, OnDisk, refuse_missing
+from procgen.ensemble.errors import EnsembleError
+from procgen.ensemble.manifest import Manifest, bytes_text
+from procgen.ensemble.part import Task, row_bytes
+from procgen.ensemble.plan import Block, Chain, batches, chains
+from procgen.ensemble.source import FACTORY, Source, open_source, remember
+from procgen.ensemble.store import MANIFEST, Folder
+
+LAYOUTS = ("long",)
+PLAN = ".state/plan.json"
+MOST = 2**48  # paths, and steps: far beyond what can be stored, and safe in every int64
+
+
+def render(
+    spec: Any,
+    out: str | Path | None = None,
+    *,
+    paths: int | None = None,
+    first_path: int = 0,
+    steps: int | None = None,
+    seed: int | None = None,
+    workers: int | None = None,
+    reveal: Sequence[str] | str | None = None,
+    resume: bool = False,
+    overwrite: bool = False,
+    layout: str = "long",
+    progress: Progress | None = None,
+    factory: str = FACTORY,
+) -> Ensemble:
+    """Paths of a spec, as an Ensemble: in the folder `out`, or in memory.
+
+    Parameters
+    ----------
+    spec : Spec
+    out : folder to write; what is not ours in it is left alone. None: in memory, in this process.
+    paths, steps, seed : instead of what the spec says.
+    first_path : number of the first path; path 700 is the same path in every range that has it.
+    workers : processes; None is what the size repays, up to the processors there are.
+    reveal : names `series.label[.output]` to give as columns beside the series, or "all".
+    resume : go on with a render of the same spec that did not finish, or draw missing parts again.
+    overwrite : remove the ensemble that is in `out` first.
+    layout : "long": path, step, time (where the spec has a start), one column a series.
+    progress : called with (rows drawn, rows in all), often.
+
+    Raises EnsembleError: `out` holds another ensemble or is in use, too little space, a value that is not
+    finite, a file that cannot be written. KeyboardInterrupt passes through; only whole parts are left then.
+    """
+    if layout not in LAYOUTS:
+        raise EnsembleError(f"expected layout {' or '.join(LAYOUTS)}, got {layout!r}")
+    if resume and overwrite:
+        raise EnsembleError("resume goes on with what is there and overwrite removes it; give one of them")
+    changes = {"paths": paths, "steps": steps, "seed": seed}
+    if any(value is not None for value in changes.values()):
+        spec = spec.changed(**changes)
+    names = _reveal(spec, reveal)
+    source = remember(spec, names) if factory == FACTORY else open_source(spec.raw, names, factory)
+    whole = Block(_first(first_path), spec.paths, 0, spec.time.steps)
+    if max(whole.end_path, whole.steps) > MOST:
+        raise EnsembleError(f"expected at most {MOST} paths and steps, got {whole}")
+    if out is None:
+        return _in_memory(spec, source, whole, progress)
+    job = Job(spec, source, whole, Folder(Path(out)), names, layout, factory)
+    return job.run(_workers(workers, whole.rows * len(source.columns)), resume, overwrite, progress)
+
+
+def _first(value: int) -> int:
+    if isinstance(value, bool) or not isinstance(value, int) or value < 0:
+        raise EnsembleError(f"expected first_path to be a whole number of at least 0, got {value!r}")
+    return value
+
+
+def _workers(value: int | None, values: int) -> int:
+    if value is None:
+        return engines.default_workers(values)
+    if isinstance(value, bool) or not isinstance(value, int) or value < 1:
+        raise EnsembleError(f"expected workers to be a whole number of at least 1, got {value!r}")
+    return value
+
+
+def _reveal(spec: Any, reveal: Sequence[str] | str | None) -> tuple[str, ...]:
+    if reveal is None:
+        return ()
+    if isinstance(reveal, str):
+        reveal = [name.strip() for name in reveal.split(",")]
+    if list(reveal) == ["all"]:
+        from procgen.ensemble.source import revealable
+
+        return revealable(spec)
+    return tuple(dict.fromkeys(reveal))
+
+
+def _in_memory(spec: Any, source: Source, whole: Block, progress: Progress | None) -> Memory:
+    need, free = whole.rows * row_bytes(source.columns), _free_memory()
+    if free is not None and need > free:
+        raise EnsembleError(
+            f"{whole.rows} rows of {len(source.columns)} columns take {bytes_text(need)} in memory, and "
+            f"{bytes_text(free)} are free; give out= to write them to files, or ask for fewer paths or steps"
+        )
+    done = 0
+
+    def tick(rows: int) -> None:
+        nonlocal done
+        done += rows
+        if progress is not None:
+            progress(done, whole.rows)
+
+    values = empty(whole, source.columns)
+    drawer = Drawer(source, tick)
+    for batch in batches(whole, row_bytes(source.columns)):
+        rows = slice(batch.first_path - whole.first_path, batch.end_path - whole.first_path)
+        span = slice(batch.first_step, batch.end_step)
+        drawer.fill(batch, {name: data[rows, span] for name, data in values.items()})
+        if batch.end_step == whole.end_step:
+            drawer.forget()
+    stored = {column.name: store(values.pop(column.name), column) for column in source.columns}
+    return Memory(stored, source.columns, whole, source.stamps, spec)
+
+
+def _free_memory() -> int | None:
+    try:
+        with open("/proc/meminfo", encoding="ascii") as lines:
+            found = [line.split()[1] for line in lines if line.startswith("MemAvailable")]
+    except OSError:
+        return None
+    return int(found[0]) * 1024 if found else None
+
+
+@dataclass
+class Job:
+    """One render into a folder."""
+
+    spec: Any
+    source: Source
+    whole: Block
+    folder: Folder
+    reveal: tuple[str, ...]
+    layout: str
+    factory: str
+
+    def __post_init__(self) -> None:
+        self.columns = self.source.columns
+        self.identity = {
+            "spec": self.spec.digest(),
+            "seed": self.spec.seed,
+            "first_path": self.whole.first_path,
+            "paths": self.whole.paths,
+            "steps": self.whole.steps,
+            "stream_version": STREAM_VERSION,
+            "layout": self.layout,
+            "reveal": list(self.reveal),
+        }
+
+    def run(self, workers: int, resume: bool, overwrite: bool, progress: Progress | None) -> OnDisk:
+        if not overwrite and (complete := self._complete(resume)) is not None:
+            return complete
+        with self.folder.locked() as descriptor:
+            # another render may have finished while this one waited for the lock
+            if not overwrite and (complete := self._complete(resume)) is not None:
+                return complete
+            return self._draw(workers, resume, overwrite, progress, descriptor)
+
+    # what is there
+
+    def _complete(self, resume: bool) -> OnDisk | None:
+        """The finished ensemble in the folder, None when there is something to draw."""
+        found = self._manifest()
+        if found is None:
+            return None
+        self._refuse_other(found.identity)
+        try:
+            refuse_missing(self.folder, found)
+        except EnsembleError:
+            if not resume:
+                raise
+            return None
+        return OnDisk(self.folder.path, found, self.spec)
+
+    def _manifest(self) -> Manifest | None:
+        data = self.folder.read_json(MANIFEST)
+        return None if data is None else Manifest.read(data, str(self.folder.path / MANIFEST))
+
+    def _refuse_other(self, identity: Mapping[str, Any]) -> None:
+        names = {"spec": "spec (its digest)"}
+        differ = [key for key in self.identity if identity.get(key) != self.identity[key]]
+        if len(differ) > 1 and "spec" in differ:
+            differ.remove("spec")  # it holds seed, paths and steps too, which are easier to read
+        if differ:
+            found = ", ".join(f"{names.get(k, k)} {identity.get(k)} there, {self.identity[k]} asked" for k in differ)
+            raise EnsembleError(
+                f"{self.folder.path} holds an ensemble of another kind ({found}); "
+                "choose another OUT, or remove that one with --overwrite"
+            )
+
+    def _layout(self, workers: int, resume: bool) -> tuple[Chain, ...]:
+        """Chains of an unfinished render that is to go on, or new ones."""
+        plan = self.folder.read_json(PLAN)
+        if plan is not None:
+            self._refuse_other(plan.get("identity", {}))
+            if not resume:
+                raise EnsembleError(
+                    f"{self.folder.path} holds an unfinished render of this spec; "
+                    "go on with --resume, or begin again with --overwrite"
+                )
+            return tuple(tuple(Block(*block) for block in chain) for chain in plan["chains"])
+        found = self._manifest()
+        if found is not None:
+            blocks = [part.block for part in found.parts]
+            return tuple(tuple(chain) for _, chain in groupby(blocks, key=lambda block: block.first_path))
+        return chains(self.whole, row_bytes(self.columns), workers)
+
+    def _remove_old(self) -> None:
+        """Remove the ensemble that is there: files that it lists or that say that they are ours."""
+        listed: set[str] = set()
+        found = self.folder.read_json(MANIFEST)
+        if found is not None:
+            listed = {part.file for part in Manifest.read(found, str(self.folder.path / MANIFEST)).parts}
+        listed |= set((self.folder.read_json(PLAN) or {}).get("files", ()))
+        ours = [name for name in self.folder.part_files() if name in listed or self._ours(name)]
+        self.folder.remove(([MANIFEST] if found is not None else []) + ours)
+        self.folder.clean_state(keep_plan=False)
+
+    def _ours(self, name: str) -> bool:
+        try:
+            parquet.footer(self.folder.path / name)
+        except EnsembleError:
+            return False
+        return True
+
+    def _present(self, plan: Sequence[Chain]) -> dict[Block, dict[str, Any]]:
+        """Records of the planned parts that are there and belong to this render."""
+        found = {}
+        files = set(self.folder.part_files())
+        for part in (part for chain in plan for part in chain):
+            name = part.file(self.whole)
+            if name not in files:
+                continue
+            identity, nodes, _ = parquet.footer(self.folder.path / name)
+            self._refuse_other(identity)
+            if identity.get("part") == asdict(part):
+                found[part] = {"part": asdict(part), "bytes": self.folder.size(name), "nodes": nodes}
+        return found
+
+    # what must be drawn
+
+    def _draw(
+        self, workers: int, resume: bool, overwrite: bool, progress: Progress | None, descriptor: int | None
+    ) -> OnDisk:
+        if overwrite:
+            self._remove_old()
+        plan = self._layout(workers, resume)
+        there = self._present(plan)
+        self._refuse_too_large(self.whole.rows - sum(part.rows for part in there))
+        self.folder.clean_state(keep_plan=True)
+        files = [part.file(self.whole) for chain in plan for part in chain]
+        blocks = [[(b.first_path, b.paths, b.first_step, b.steps) for b in chain] for chain in plan]
+        self.folder.write_json(PLAN, {"identity": self.identity, "files": files, "chains": blocks})
+        self.folder.remove([MANIFEST] if self.folder.size(MANIFEST) >= 0 else [])
+
+        tasks, records = [], []
+        for chain in plan:
+            start = next((k for k, part in enumerate(chain) if part not in there), len(chain))
+            records += [there[part] for part in chain[:start]]
+            if start < len(chain):
+                tasks.append(self._task(chain, start))
+        done = sum(Block(**record["part"]).rows for record in records)
+        records += engines.run(tasks, workers, progress, done, self.whole.rows, descriptor)
+        made = self._make_manifest(records)
+        self.folder.write_json(MANIFEST, made.json())
+        self.folder.finish()
+        return OnDisk(self.folder.path, made, self.spec)
+
+    def _task(self, chain: Chain, start: int) -> Task:
+        out = str(self.folder.path.absolute())
+        return Task(self.spec.raw, self.identity, out, self.whole, chain, start, self.reveal, self.factory)
+
+    def _refuse_too_large(self, rows: int) -> None:
+        need = rows * sum(TYPES[column.type] for column in self.columns)
+        free = shutil.disk_usage(self.folder.path).free
+        if need > free:
+            raise EnsembleError(
+                f"{rows} rows of {len(self.columns)} columns take about {bytes_text(need)}, and "
+                f"{self.folder.path} has {bytes_text(free)} free; ask for fewer paths or steps, use "
+                "type: float32, or choose another OUT"
+            )
+
+    def _make_manifest(self, records: list[dict[str, Any]]) -> Manifest:
+        records.sort(key=lambda record: (record["part"]["first_path"], record["part"]["first_step"]))
+        series = [column.name for column in self.columns if not column.revealed]
+        revealed = [column.name for column in self.columns if column.revealed]
+        portable, why = self.source.portable
+        return Manifest(
+            identity=self.identity,
+            raw=self.spec.raw,
+            canonical=self.spec.canonical(),
+            whole=self.whole,
+            columns=tuple(self.columns),
+            time=self._time(),
+            parts=tuple(manifest.part_record(record, self.whole) for record in records),
+            stored=manifest.roots(records, self.whole, "stored", series),
+            drawn=manifest.roots(records, self.whole, "drawn", series),
+            revealed=manifest.roots(records, self.whole, "stored", revealed),
+            portable=portable,
+            why_not_portable=why,
+            versions=manifest.versions(),
+        )
+
+    def _time(self) -> dict[str, Any] | None:
+        if self.source.stamps is None:
+            return None
+        first, last = (self.source.stamps(step, 1)[0] for step in (0, self.whole.steps - 1))
+        grid = self.spec.time
+        stamps = {"first": _iso(first), "last": _iso(last)}
+        return {"zone": grid.zone or "UTC", "stamp": grid.stamp, **stamps, "tzdata": manifest.tz_version()}
+
+
+def _iso(microseconds: int) -> str:
+    import numpy as np
+
+    return str(np.datetime64(int(microseconds), "us")) + "Z"

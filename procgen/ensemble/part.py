@@ -1,0 +1,130 @@
+"""Rendering one chain of parts: draw, round, digest and write in one pass.
+
+`render_chain` is a plain function of a Task, which is made of numbers and text only, so any engine can run
+it anywhere. Running it twice, even at once, gives the same files.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import asdict, dataclass
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from procgen.ensemble import digest
+from procgen.ensemble.columns import Column, as_float, store
+from procgen.ensemble.draw import Drawer, Tick, empty
+from procgen.ensemble.parquet import PartWriter
+from procgen.ensemble.plan import Block, Chain, batches
+from procgen.ensemble.source import FACTORY, Source, open_source
+from procgen.ensemble.store import Folder
+
+
+@dataclass(frozen=True)
+class Task:
+    """One chain to draw: everything a worker must know, as plain data."""
+
+    raw: Mapping[str, Any]
+    identity: Mapping[str, Any]
+    out: str
+    whole: Block
+    chain: Chain
+    start: int = 0  # parts before this one are there already
+    reveal: tuple[str, ...] = ()
+    factory: str = FACTORY
+
+    def json(self) -> dict[str, Any]:
+        return asdict(self)
+
+    @classmethod
+    def read(cls, data: Mapping[str, Any]) -> Task:
+        blocks = tuple(Block(**block) for block in data["chain"])
+        whole, reveal = Block(**data["whole"]), tuple(data["reveal"])
+        return cls(**(dict(data) | {"whole": whole, "chain": blocks, "reveal": reveal}))
+
+
+def row_bytes(columns: list[Column]) -> int:
+    """Bytes of one row in the buffers."""
+    return 8 * len(columns)
+
+
+def render_chain(task: Task, tick: Tick = lambda rows: None) -> list[dict[str, Any]]:
+    """Draw and write the parts of a chain from `task.start` on; their records for the manifest."""
+    source = open_source(task.raw, task.reveal, task.factory)
+    folder = Folder(Path(task.out))
+    drawer = Drawer(source, tick)
+    records = []
+    for number in range(_take_up(task, folder, drawer), len(task.chain)):
+        if number < task.start:
+            _pass_over(task, task.chain[number], source, drawer)
+            continue
+        records.append(_render_part(task, task.chain[number], source, drawer, folder))
+        if number:
+            folder.drop_state(task.chain[number - 1].file(task.whole))
+    return records
+
+
+def _take_up(task: Task, folder: Folder, drawer: Drawer) -> int:
+    """Restore the state after the last part that is there; the number of parts that need not be drawn."""
+    if task.start == 0:
+        return 0
+    last = task.chain[task.start - 1]
+    state = folder.load_state(last.file(task.whole))
+    if state is None:
+        return 0
+    drawer.restore(last.end_step, state)
+    return task.start
+
+
+def _pass_over(task: Task, part: Block, source: Source, drawer: Drawer) -> None:
+    """Draw a part that is there already, for the state at its end."""
+    columns = source.columns
+    for batch in batches(part, row_bytes(columns), task.chain[0].steps):
+        drawer.fill(batch, empty(batch, columns))
+
+
+def _render_part(task: Task, part: Block, source: Source, drawer: Drawer, folder: Folder) -> dict[str, Any]:
+    name, columns = part.file(task.whole), source.columns
+    last = part.end_step == task.whole.end_step
+    digests = Digests(part, columns)
+    buffers: dict[str, np.ndarray] = {}
+    with folder.writing(name) as temporary:
+        with PartWriter(temporary, columns, source.stamps, {**task.identity, "part": asdict(part)}) as writer:
+            for batch in batches(part, row_bytes(columns), task.chain[0].steps):
+                if not buffers or buffers[columns[0].name].shape != (batch.paths, batch.steps):
+                    buffers = empty(batch, columns)
+                drawer.fill(batch, buffers)
+                stored = {column.name: store(buffers[column.name], column) for column in columns}
+                digests.add(batch, buffers, stored)
+                writer.write(batch, stored)
+                if last and batch.end_step == part.end_step:
+                    drawer.forget()
+            writer.nodes = digests.packed(task.whole)
+        if not last:
+            folder.save_state(name, drawer.state())
+    return {"part": asdict(part), "bytes": folder.size(name), "nodes": writer.nodes}
+
+
+class Digests:
+    """The digests of all columns of a part, drawn and stored."""
+
+    def __init__(self, part: Block, columns: list[Column]):
+        self.columns = columns
+        self.stored = {column.name: digest.Leaves(part) for column in columns}
+        self.drawn = {column.name: digest.Leaves(part) for column in columns if not column.exact}
+
+    def add(self, batch: Block, drawn: Mapping[str, np.ndarray], stored: Mapping[str, np.ndarray]) -> None:
+        for name, leaves in self.stored.items():
+            leaves.add(batch.first_path, batch.first_step, as_float(stored[name]))
+        for name, leaves in self.drawn.items():
+            leaves.add(batch.first_path, batch.first_step, drawn[name])
+
+    def packed(self, whole: Block) -> dict[str, dict[str, str]]:
+        """Nodes as hex by column; `drawn` is given only where it differs from `stored`."""
+
+        def pack(leaves: Mapping[str, digest.Leaves]) -> dict[str, str]:
+            return {name: digest.pack(each.nodes(whole)) for name, each in leaves.items()}
+
+        return {"stored": pack(self.stored), "drawn": pack(self.drawn)}

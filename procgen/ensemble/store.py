@@ -1,0 +1,182 @@
+"""OUT, the folder of an ensemble: parts that appear whole, the manifest last, and a lock while one is made.
+
+`OUT/.state/` exists only while a render is under way: temporary files, the plan, the states from which
+chains go on, and the lock.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import json
+import os
+import re
+import shutil
+import time
+from collections.abc import Iterator, Mapping
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from procgen.ensemble.errors import EnsembleError, system_sentence
+
+MANIFEST = "manifest.json"
+PART = re.compile(r"paths-\d{9,}-\d{9,}(\.steps-\d{9,}-\d{9,})?\.parquet")
+PATIENCE = 3.0  # seconds: workers whose parent was killed are gone by then
+
+
+class Folder:
+    """The files of one ensemble; errors of the operating system become sentences."""
+
+    def __init__(self, path: Path):
+        self.path = path
+        self.state = path / ".state"
+
+    @contextlib.contextmanager
+    def writing(self, name: str) -> Iterator[Path]:
+        """A temporary path that becomes OUT/name when the block ends well, and nothing otherwise."""
+        temporary = self.state / f"{Path(name).name}.{os.getpid()}.tmp"
+        try:
+            yield temporary
+            os.replace(temporary, self.path / name)
+        except OSError as error:
+            raise EnsembleError(system_sentence(error, f"writing {self.path / name}")) from None
+        finally:
+            with contextlib.suppress(OSError):
+                temporary.unlink(missing_ok=True)
+
+    def write_json(self, name: str, data: Mapping[str, Any]) -> None:
+        with self.writing(name) as temporary:
+            text = json.dumps(data, indent=1, ensure_ascii=False, allow_nan=False) + "\n"
+            temporary.write_text(text, encoding="utf-8")
+
+    def read_json(self, name: str) -> dict[str, Any] | None:
+        """A JSON object, or None when there is no such file; EnsembleError when it is anything else."""
+        path = self.path / name
+        try:
+            data = json.loads(path.read_text(encoding="utf-8"))
+        except FileNotFoundError:
+            return None
+        except OSError as error:
+            raise EnsembleError(system_sentence(error, f"reading {path}")) from None
+        except (ValueError, RecursionError) as error:
+            raise EnsembleError(f"{path} is not JSON ({error}); it is damaged, or not ours") from None
+        if not isinstance(data, dict):
+            raise EnsembleError(f"{path} holds {type(data).__name__}, expected a JSON object")
+        return data
+
+    def size(self, name: str) -> int:
+        """Bytes of a file, -1 when it is not there."""
+        try:
+            return (self.path / name).stat().st_size
+        except OSError:
+            return -1
+
+    def save_state(self, name: str, state: Mapping[str, np.ndarray]) -> None:
+        """Keep the carried state at the end of part `name`."""
+        with self.writing(f".state/{name}.npz") as temporary, open(temporary, "wb") as file:
+            np.savez(file, **state)  # type: ignore[arg-type]
+
+    def load_state(self, name: str) -> dict[str, np.ndarray] | None:
+        """The state at the end of part `name`, or None when it is not there or damaged."""
+        try:
+            with np.load(self.state / f"{name}.npz", allow_pickle=False) as data:
+                return dict(data)
+        except Exception:  # a damaged archive shows in many ways; all of them mean: draw again
+            return None
+
+    def drop_state(self, name: str) -> None:
+        with contextlib.suppress(OSError):
+            (self.state / f"{name}.npz").unlink(missing_ok=True)
+
+    def part_files(self) -> list[str]:
+        """Names in OUT that have the form of a part's name."""
+        try:
+            return sorted(name for name in os.listdir(self.path) if PART.fullmatch(name))
+        except FileNotFoundError:
+            return []
+
+    def remove(self, names: list[str]) -> None:
+        """Remove files of OUT, the manifest first, so that nothing that is left looks whole."""
+        for name in sorted(names, key=lambda name: name != MANIFEST):
+            try:
+                (self.path / name).unlink(missing_ok=True)
+            except OSError as error:
+                raise EnsembleError(system_sentence(error, f"removing {self.path / name}")) from None
+
+    def clean_state(self, keep_plan: bool) -> None:
+        """Remove what earlier renders left in .state: all but the lock and, when asked, plan and states."""
+        for entry in self.state.iterdir():
+            kept = entry.name == "lock" or (keep_plan and entry.suffix in (".json", ".npz"))
+            if not kept:
+                shutil.rmtree(entry) if entry.is_dir() and not entry.is_symlink() else entry.unlink()
+
+    @contextlib.contextmanager
+    def locked(self) -> Iterator[int | None]:
+        """Hold OUT for this process and the workers that inherit the lock's file descriptor.
+
+        The operating system drops the lock when the last of them ends, however it ends. Without `fcntl`
+        (Windows) nothing is locked.
+        """
+        try:
+            self.state.mkdir(parents=True, exist_ok=True)
+            descriptor = self._lock()
+        except NotADirectoryError:
+            raise EnsembleError(f"{self.path} is not a folder; choose another OUT") from None
+        except FileExistsError as error:
+            raise EnsembleError(f"{error.filename} is not a folder; choose another OUT") from None
+        except OSError as error:
+            raise EnsembleError(system_sentence(error, f"making {self.path}")) from None
+        try:
+            yield descriptor
+        finally:
+            if not (self.state / "plan.json").exists():
+                self.finish()
+            os.close(descriptor)
+
+    def _lock(self) -> int:
+        path = self.state / "lock"
+        give_up = time.monotonic() + PATIENCE
+        while True:
+            descriptor = os.open(path, os.O_RDWR | os.O_CREAT, 0o666)
+            if _try_lock(descriptor):
+                # the previous holder may have removed the file while this process waited for it
+                if _same_file(descriptor, path):
+                    os.ftruncate(descriptor, 0)
+                    os.pwrite(descriptor, str(os.getpid()).encode(), 0)
+                    return descriptor
+            elif time.monotonic() > give_up:
+                holder = os.pread(descriptor, 20, 0).decode("ascii", "replace")
+                os.close(descriptor)
+                raise EnsembleError(
+                    f"another render is at work in {self.path} (process {holder}); wait for it, or choose another OUT"
+                )
+            os.close(descriptor)
+            self.state.mkdir(exist_ok=True)
+            time.sleep(0.02)
+
+    def finish(self) -> None:
+        """Remove .state, its lock last; to be called while the lock is held."""
+        with contextlib.suppress(OSError):
+            self.clean_state(keep_plan=False)
+            (self.state / "lock").unlink(missing_ok=True)
+            self.state.rmdir()
+
+
+def _try_lock(descriptor: int) -> bool:
+    try:
+        import fcntl
+    except ImportError:
+        return True
+    try:
+        fcntl.flock(descriptor, fcntl.LOCK_EX | fcntl.LOCK_NB)
+    except BlockingIOError:
+        return False
+    return True
+
+
+def _same_file(descriptor: int, path: Path) -> bool:
+    try:
+        return os.path.samestat(os.fstat(descriptor), os.stat(path))
+    except FileNotFoundError:
+        return False
