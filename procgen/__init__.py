@@ -1,0 +1,65 @@
+"""Time series whose true behaviour is known: a written spec becomes theory, an ensemble of paths, and a verdict.
+
+import procgen as pg
+
+spec = pg.load("specs/cold-store.yaml")              # pg.SpecError lists every fault
+th = pg.theory(spec)                                 # th["load_kw"].variance([0, 96])
+ens = pg.render(spec, out="build/cold-store")        # or out=None: in memory
+pg.validate(ens, false_alarm=0.001)                  # .agrees, .checks, .to_html("report.html")
+"""
+
+from __future__ import annotations
+
+import importlib
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    from procgen.api import digest, load, open_ensemble, render, theory, validate
+    from procgen.checks.verdict import Verdict
+    from procgen.ensemble.ensemble import Ensemble
+    from procgen.ensemble.errors import EnsembleError
+    from procgen.spec.model import Spec, SpecError
+
+__version__ = "0.1.0"
+
+_HOMES = {
+    "Ensemble": "procgen.ensemble.ensemble",
+    "EnsembleError": "procgen.ensemble.errors",
+    "Spec": "procgen.spec.model",
+    "SpecError": "procgen.spec.model",
+    "Verdict": "procgen.checks.verdict",
+    "digest": "procgen.api",
+    "load": "procgen.api",
+    "open_ensemble": "procgen.api",
+    "render": "procgen.api",
+    "theory": "procgen.api",
+    "validate": "procgen.api",
+}
+
+__all__ = [
+    "Ensemble",
+    "EnsembleError",
+    "Spec",
+    "SpecError",
+    "Verdict",
+    "__version__",
+    "digest",
+    "load",
+    "open_ensemble",
+    "render",
+    "theory",
+    "validate",
+]
+
+
+def __getattr__(name: str) -> Any:
+    """Public names are imported when they are first used, so that `import procgen` costs nothing."""
+    if name not in _HOMES:
+        raise AttributeError(f"module 'procgen' has no attribute {name!r}")
+    value = getattr(importlib.import_module(_HOMES[name]), name)
+    globals()[name] = value
+    return value
+
+
+def __dir__() -> list[str]:
+    return sorted(__all__)

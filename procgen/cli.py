@@ -1,0 +1,200 @@
+"""The command line: parse, call, print. What is heavy is imported by the command that uses it."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Annotated
+
+import typer
+
+from procgen.console import guarded, printed, progress, run
+
+CONTEXT = {"help_option_names": ["-h", "--help"]}
+app = typer.Typer(
+    name="procgen",
+    help="Time series whose true behaviour is known: what a spec implies, paths of it, and whether they agree.",
+    epilog="A spec is a YAML file; specs/README.md in the checkout describes the language.",
+    context_settings=CONTEXT,
+    no_args_is_help=True,
+    add_completion=False,
+    rich_markup_mode=None,
+    pretty_exceptions_enable=False,
+)
+
+SpecFile = Annotated[Path, typer.Argument(metavar="SPEC", help="The spec, a YAML file.", show_default=False)]
+Json = Annotated[bool, typer.Option("--json", help="Print JSON instead of text.")]
+
+
+def numbers(text: str) -> tuple[int, ...]:
+    """Whole numbers from `0,1,10`."""
+    try:
+        return tuple(int(part) for part in text.split(","))
+    except ValueError:
+        raise typer.BadParameter(f"expected whole numbers such as 0,1,10, got {text!r}") from None
+
+
+@app.command(
+    short_help="Draw paths of a spec.",
+    epilog="\b\nExample:\n  procgen render specs/pump-flow.yaml -o build/pump-flow --paths 5000",
+)
+@guarded
+def render(
+    spec: SpecFile,
+    out: Annotated[
+        Path, typer.Option("-o", "--out", metavar="OUT", help="Folder to write.", show_default=False)
+    ],
+    paths: Annotated[
+        int | None, typer.Option(metavar="N", help="Number of paths, instead of the spec's.", min=1)
+    ] = None,
+    first_path: Annotated[int, typer.Option(metavar="N", help="Number of the first path.", min=0)] = 0,
+    steps: Annotated[
+        int | None, typer.Option(metavar="N", help="Number of steps, instead of the spec's.", min=1)
+    ] = None,
+    seed: Annotated[int | None, typer.Option(metavar="N", help="Seed, instead of the spec's.", min=0)] = None,
+    workers: Annotated[
+        int | None, typer.Option(metavar="N", help="Processes; what the size repays when absent.", min=1)
+    ] = None,
+    layout: Annotated[str, typer.Option(metavar="long", help="Layout of the files.")] = "long",
+    reveal: Annotated[
+        str | None,
+        typer.Option(metavar="all|NAME,…", help="Terms and hidden outputs to write beside the series."),
+    ] = None,
+    resume: Annotated[bool, typer.Option("--resume", help="Go on with a render that was stopped.")] = False,
+    overwrite: Annotated[
+        bool, typer.Option("--overwrite", help="Remove the ensemble that is in OUT first.")
+    ] = False,
+    scheduler: Annotated[str, typer.Option(metavar="local", help="Who draws: this machine.")] = "local",
+) -> None:
+    """Draw paths of SPEC into the folder OUT: Parquet parts and manifest.json."""
+    from procgen import api
+
+    if scheduler != "local":
+        raise typer.BadParameter(f"expected local, got {scheduler!r}", param_hint="--scheduler")
+    loaded = api.load(spec)
+    with progress("drawing") as tick:
+        ensemble = api.render(
+            loaded,
+            out,
+            paths=paths,
+            first_path=first_path,
+            steps=steps,
+            seed=seed,
+            workers=workers,
+            layout=layout,
+            reveal=reveal,
+            resume=resume,
+            overwrite=overwrite,
+            progress=tick,
+        )
+    printed(api.summary(ensemble))
+
+
+@app.command(
+    short_help="Compare paths with the theory of their spec.",
+    epilog="\b\nExamples:\n  procgen validate build/pump-flow\n"
+    "  procgen validate mine.csv --spec specs/pump-flow.yaml --path-col run --step-col hour",
+)
+@guarded
+def validate(
+    data: Annotated[
+        Path,
+        typer.Argument(metavar="OUT|DATA", help="An ensemble, or a Parquet or CSV file.", show_default=False),
+    ],
+    spec: Annotated[
+        Path | None, typer.Option(metavar="SPEC", help="The spec that DATA should follow.")
+    ] = None,
+    path_col: Annotated[
+        str | None, typer.Option(metavar="NAME", help="Column of DATA with the path.")
+    ] = None,
+    step_col: Annotated[
+        str | None, typer.Option(metavar="NAME", help="Column of DATA with the step.")
+    ] = None,
+    false_alarm: Annotated[
+        float, typer.Option(metavar="P", help="Chance of a false alarm over all checks.", min=1e-12, max=0.5)
+    ] = 0.001,
+    json: Json = False,
+    report: Annotated[
+        Path | None, typer.Option(metavar="FILE.html", help="Also write an HTML report.")
+    ] = None,
+) -> None:
+    """Compare paths with the theory of their spec.
+
+    Ends with exit code 0 when they agree, 1 when they depart, 2 when it cannot be judged.
+    """
+    from procgen import api
+
+    with progress("reading") as tick:
+        verdict = api.validate(
+            data, spec=spec, path_col=path_col, step_col=step_col, false_alarm=false_alarm, progress=tick
+        )
+    if report is not None:
+        verdict.to_html(report)
+    printed(verdict.to_json() if json else verdict.to_text())
+    raise typer.Exit({True: 0, False: 1, None: 2}[verdict.agrees])
+
+
+@app.command(
+    short_help="Print what a spec implies.",
+    epilog="\b\nExample:\n  procgen theory specs/pump-flow.yaml --at 0,1,24 --lags 5",
+)
+@guarded
+def theory(
+    spec: SpecFile,
+    json: Json = False,
+    at: Annotated[
+        tuple | None,
+        typer.Option(parser=numbers, metavar="0,1,10", help="Steps at which to give mean and variance."),
+    ] = None,
+    lags: Annotated[
+        int, typer.Option(metavar="N", help="Largest lag of the autocovariances.", min=0, max=100_000)
+    ] = 40,
+) -> None:
+    """Print what SPEC implies: equations, stationarity, means, variances, autocovariances."""
+    from procgen import api
+
+    printed(api.theory_report(api.load(spec), at=at, lags=lags, json=json))
+
+
+@app.command(
+    short_help="List the terms a spec can use, or explain one.",
+    epilog="\b\nExamples:\n  procgen terms\n  procgen terms garch",
+)
+@guarded
+def terms(
+    kind: Annotated[
+        str | None, typer.Argument(metavar="[KIND]", help="A term, or a law of shocks.", show_default=False)
+    ] = None,
+) -> None:
+    """List the terms a spec can use, or say what is known of one: parameters, example, theory, source."""
+    from procgen.report import catalogue
+
+    printed(catalogue.screen() if kind is None else catalogue.page(kind))
+
+
+@app.command(
+    short_help="Compare values with the digests in their manifest.",
+    epilog="\b\nExamples:\n  procgen digest build/pump-flow\n  procgen digest build/pump-flow --redraw",
+)
+@guarded
+def digest(
+    out: Annotated[Path, typer.Argument(metavar="OUT", help="A rendered ensemble.", show_default=False)],
+    expect: Annotated[str | None, typer.Option(metavar="HEX", help="The digest it should have.")] = None,
+    redraw: Annotated[
+        bool, typer.Option("--redraw", help="Also draw some paths again; name the first difference.")
+    ] = False,
+) -> None:
+    """Compare the values in OUT with the digests in its manifest, and print the digest.
+
+    Ends with exit code 0 when they agree, 1 when they differ, 2 when OUT cannot be read.
+    """
+    from procgen import api
+
+    with progress("reading") as tick:
+        result = api.digest(out, expect=expect, redraw=redraw, progress=tick)
+    printed(result.text())
+    raise typer.Exit(0 if result.ok else 1)
+
+
+def main() -> None:
+    """Run the command line of this process."""
+    run(app)

@@ -1,0 +1,105 @@
+"""What the commands share: one sentence for any failure, exit codes, and a progress bar on a terminal."""
+
+from __future__ import annotations
+
+import os
+import sys
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from functools import wraps
+from typing import Any, NoReturn
+
+import typer
+
+BAD_INPUT, INTERRUPTED, BROKEN_PIPE = 2, 130, 141
+Tick = Callable[[int, int], None]
+
+
+def guarded(command: Callable[..., None]) -> Callable[..., None]:
+    """The command, with failures turned into a message and an exit code."""
+
+    @wraps(command)
+    def safe(*args: Any, **kwargs: Any) -> None:
+        try:
+            command(*args, **kwargs)
+            sys.stdout.flush()
+        except Exception as error:
+            _stop(error)
+        except KeyboardInterrupt:
+            _say("stopped; what was finished is kept, and render goes on with --resume")
+            raise typer.Exit(INTERRUPTED) from None
+
+    return safe
+
+
+def run(app: typer.Typer) -> NoReturn:
+    """Run the app and end the process with its exit code, without a traceback whatever happens."""
+    try:
+        app()
+    except KeyboardInterrupt:  # before or after the command itself
+        sys.exit(INTERRUPTED)
+    sys.exit(0)
+
+
+def printed(text: str) -> None:
+    """Write text to standard output, whatever letters the terminal can show."""
+    stream = sys.stdout
+    encoding = getattr(stream, "encoding", None) or "utf-8"
+    stream.write(text.encode(encoding, "replace").decode(encoding))
+    if not text.endswith("\n"):
+        stream.write("\n")
+
+
+@contextmanager
+def progress(doing: str) -> Iterator[Tick | None]:
+    """A tick(rows done, rows in all) that moves a bar on a terminal; None in a pipe."""
+    if not sys.stderr.isatty():
+        yield None
+        return
+    from rich.console import Console
+    from rich.progress import BarColumn, Progress, TaskProgressColumn, TextColumn, TimeRemainingColumn
+
+    columns = (TextColumn(doing), BarColumn(), TaskProgressColumn(), TextColumn("{task.fields[rate]}"))
+    with Progress(*columns, TimeRemainingColumn(), console=Console(stderr=True), transient=True) as bar:
+        task = bar.add_task(doing, total=None, rate="")
+
+        def tick(done: int, rows: int) -> None:
+            speed = bar.tasks[0].speed
+            rate = f"{done:,} of {rows:,} rows" + (f", {speed:,.0f} a second" if speed else "")
+            bar.update(task, completed=done, total=rows, rate=rate)
+
+        yield tick
+
+
+def _stop(error: Exception) -> NoReturn:
+    if isinstance(error, (typer.Exit, typer.Abort)) or hasattr(error, "exit_code"):
+        raise error
+    if os.environ.get("PROCGEN_DEBUG") == "1":
+        import traceback
+
+        traceback.print_exc()
+    if isinstance(error, BrokenPipeError):  # whoever read the output has enough
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        raise typer.Exit(BROKEN_PIPE) from None
+    _say(sentence(error))
+    raise typer.Exit(BAD_INPUT) from None
+
+
+def sentence(error: Exception) -> str:
+    """What went wrong, for a person: our own errors say it themselves, others in one line."""
+    if type(error).__module__.startswith("procgen."):
+        return str(error)
+    if isinstance(error, MemoryError):
+        return "not enough memory; ask for fewer paths or steps at a time, or fewer workers"
+    if isinstance(error, OSError):
+        where = f"{error.filename}: " if error.filename else ""
+        return f"{where}{error.strerror or error}"
+    name = type(error).__name__
+    return (
+        f"a fault in procgen itself ({name}: {error}); please report it, with the spec and with what is printed "
+        "when PROCGEN_DEBUG=1 is set in the environment"
+    )
+
+
+def _say(text: str) -> None:
+    print(f"procgen: {text}", file=sys.stderr)

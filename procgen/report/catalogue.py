@@ -1,0 +1,176 @@
+"""The catalogue of terms and laws as text, made from their declarations."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from textwrap import fill
+from typing import Any
+
+from procgen.chance.laws import LAWS
+from procgen.spec.declare import Parameter, Record, Records
+from procgen.spec.words import did_you_mean
+from procgen.terms import catalogue
+
+SHOCK = "any noise-like term in place of sd, total_sd and law"
+
+
+class UnknownName(ValueError):
+    """A name that the catalogue does not have; the message gives the nearest one."""
+
+
+def screen(width: int = 100) -> str:
+    """Every kind of term by family, one line each where they fit, and the laws."""
+    lines: list[str] = []
+    pad = max(len(kind) for kind in catalogue()) + 4
+    family = None
+    for kind, term in catalogue().items():
+        if term.family != family:
+            family = term.family
+            lines += ["", family]
+        lines.append(_hanging(f"  {kind}", term.purpose, pad, width))
+    lines += [
+        "",
+        "laws of a shock",
+        fill(", ".join(LAWS), width, initial_indent="  ", subsequent_indent="  "),
+    ]
+    lines += ["", "procgen terms NAME says more, with an example that runs."]
+    return "\n".join(lines[1:])
+
+
+def page(name: str, width: int = 100) -> str:
+    """One term or law: purpose, equation, parameters, an example that runs, what theory knows, source.
+
+    Raises UnknownName with the nearest name when there is no such term or law.
+    """
+    if name in catalogue():
+        return _term_page(name, width)
+    if name in LAWS:
+        return _law_page(name, width)
+    known = [*catalogue(), *LAWS]
+    hint = did_you_mean(name, known)
+    raise UnknownName(f"there is no term or law {name}; {hint or 'the names are: ' + ', '.join(known)}")
+
+
+def example_spec(kind: str) -> str:
+    """A whole spec around the example of a term."""
+    shared = "shared:\n  weather: [{ar: {phi: 0.9, total_sd: 1}}]\n" if kind == "use" else ""
+    head = "procgen: 1\nseed: 1\npaths: 100\ntime: {steps: 50}\n"
+    return f"{head}{shared}series:\n  x: [{{{catalogue()[kind].example}}}]\n"
+
+
+def equation(kind: str) -> str:
+    """The equation of a term, with the numbers of its example."""
+    from procgen.spec.reader import read_text
+    from procgen.terms.graph import build
+
+    if kind == "use":
+        return "y[t] = x[t], the value of what is named"
+    graph = build(read_text(example_spec(kind), catalogue(), LAWS))
+    node = next(node for _, node in graph.terms() if node.term.kind == kind)
+    return node.term.equation(*[_letter(i, node.term) for i, _ in enumerate(node.inputs)])
+
+
+def rows(parameters: Iterable[Parameter], prefix: str = "") -> list[tuple[str, str, str, str, str]]:
+    """Parameters as (name, symbol, domain, default, meaning with unit), those of records below their record."""
+    out = []
+    for p in parameters:
+        out.append((prefix + p.name, p.symbol, p.domain.describe(), default(p), meaning(p)))
+        if isinstance(p.domain, (Record, Records)):
+            out += rows(p.domain.parameters, f"{prefix}{p.name}.")
+    return out
+
+
+def default(parameter: Parameter) -> str:
+    """What holds when the parameter is not written, in words."""
+    if parameter.required:
+        return "required"
+    if parameter.default is None or parameter.default == ():
+        return "optional"
+    value = parameter.default
+    return (
+        str(value).lower() if isinstance(value, bool) else f"{value:g}" if _is_number(value) else str(value)
+    )
+
+
+def meaning(parameter: Parameter) -> str:
+    """Meaning, unit, and whether `per` may stand beside the value."""
+    notes = []
+    if parameter.unit == "series":
+        notes.append("in the unit of the series")
+    elif parameter.unit != "1":
+        notes.append(f"in {parameter.unit}")
+    if parameter.per:
+        notes.append("may say per:" if parameter.per == "rate" else "may say per:, which goes with √time")
+    return parameter.meaning + (f" ({'; '.join(notes)})" if notes else "")
+
+
+def noises() -> list[str]:
+    """The kinds that may stand as a shock."""
+    return [kind for kind, term in catalogue().items() if term.noise]
+
+
+def _term_page(kind: str, width: int) -> str:
+    term: Any = catalogue()[kind]
+    facts = [
+        ("family", term.family),
+        ("equation", equation(kind)),
+        ("theory", term.knows),
+        ("source", term.source),
+    ]
+    if term.outputs:
+        facts.append(
+            ("outputs", f"{', '.join(term.outputs)} (hidden; use: series.label.output, or --reveal)")
+        )
+    if not term.portable:
+        facts.append(("portable", f"no: {term.why_not_portable}"))
+    lines = [f"{kind}: {term.purpose}", ""]
+    lines += [_hanging(name, text, 12, width) for name, text in facts]
+    lines += ["", "parameters", *_parameters(term.parameters, width)]
+    if term.takes_shock:
+        lines += ["", _hanging("shock", f"{SHOCK}: {', '.join(noises())}", 12, width)]
+    lines += ["", "a spec that runs", *(f"  {line}" for line in example_spec(kind).splitlines())]
+    return "\n".join(lines)
+
+
+def _law_page(name: str, width: int) -> str:
+    law: Any = LAWS[name]
+    purpose = (law.__doc__ or "").strip().split("\n\n")[0]
+    lines = [_hanging(f"{name}:", " ".join(purpose.split()), len(name) + 2, width), ""]
+    if law.parameters:
+        lines += ["parameters", *_parameters(law.parameters, width), ""]
+    written = (
+        f"{{{name}: {{{', '.join(f'{p.name}: …' for p in law.parameters)}}}}}" if law.parameters else name
+    )
+    lines += [f"written as   law: {written}", "every law has mean 0 and variance 1 before it is scaled by sd"]
+    return "\n".join(lines)
+
+
+def _parameters(parameters: Iterable[Parameter], width: int) -> list[str]:
+    """Columns of name, symbol and default, then meaning and domain, wrapped."""
+    table = rows(parameters)
+    if not table:
+        return ["  none"]
+    name, sign, rest = (max(len(row[i]) for row in table) + 2 for i in (0, 1, 3))
+    return [
+        _hanging(
+            f"  {row[0]:{name}}{row[1]:{sign}}{row[3]:{rest}}",
+            f"{row[4]}: {row[2]}",
+            2 + name + sign + rest,
+            width,
+        )
+        for row in table
+    ]
+
+
+def _hanging(head: str, text: str, indent: int, width: int) -> str:
+    """`text` wrapped, indented behind `head`."""
+    start = head.ljust(indent) if len(head) <= indent else f"{head}  "
+    return fill(text, max(width, indent + 30), initial_indent=start, subsequent_indent=" " * indent)
+
+
+def _letter(place: int, term: Any) -> str:
+    return "a" if term.takes_shock else "xuvw"[place] if place < 4 else f"x{place}"
+
+
+def _is_number(value: object) -> bool:
+    return isinstance(value, (int, float)) and not isinstance(value, bool)
