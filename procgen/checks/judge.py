@@ -1,0 +1,226 @@
+"""Statistics become findings: theory against estimate, a standard error, a p, and what could have been seen.
+
+Exact laws are used where they exist. Where only a central limit theorem is left, the skewness is corrected and the
+finding states down to which level its p can be trusted.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import ArrayLike, NDArray
+
+from procgen.checks import power, tails
+
+FEW_PATHS = 100  # below this many paths no central limit theorem over paths is trusted
+_TRUSTED = 0.5  # the largest relative error of a tail (as a logarithm) that still counts as known
+
+
+def _always(level: float) -> str | None:
+    return None
+
+
+@dataclass(frozen=True)
+class Finding:
+    """One comparison of theory and data.
+
+    Attributes
+    ----------
+    theory, estimate, standard_error : float
+        In the unit of the estimate; the standard error is that of the estimate under the theory.
+    log_p : float
+        Natural logarithm of p.
+    detect : callable
+        Level -> smallest departure found 9 times in 10, in the unit of the estimate (None: not known).
+    doubt : callable
+        Level -> why p cannot be trusted that far out, or None.
+    """
+
+    theory: float
+    estimate: float
+    standard_error: float
+    log_p: float
+    detect: Callable[[float], float | None]
+    doubt: Callable[[float], str | None] = _always
+
+
+def unit(z: float, error: float, theory: float = 0.0, skew: float = 0.0) -> Finding:
+    """A statistic that is standard normal under the theory; the estimate is theory + z·error."""
+    log_p = tails.two_sided(*tails.pearson3(z, skew))
+    return Finding(
+        theory, theory + z * error, error, log_p, lambda level: power.shift(level, error, abs(skew))
+    )
+
+
+def normal_mean(mean: float, mu: float, sd: float, n: int) -> Finding:
+    """The mean of n independent normals of known standard deviation: exact."""
+    error = sd / math.sqrt(n)
+    return Finding(
+        mu, mean, error, tails.normal((mean - mu) / error), lambda level: power.shift(level, error)
+    )
+
+
+def variance(s2: float, sigma2: float, dof: int) -> Finding:
+    """A normal sample variance `s2` of `dof` degrees of freedom: exact (chi-square)."""
+    log_p = tails.two_sided(*tails.chi_square(dof * s2 / sigma2, dof))
+    error = sigma2 * math.sqrt(2 / dof)
+    return Finding(sigma2, s2, error, log_p, lambda level: power.variance(level, sigma2, dof))
+
+
+def covariance(c: float, s1: float, s2: float, rho: float, dof: int) -> Finding:
+    """A sample covariance of jointly normal pairs, standard deviations and correlation stated: exact."""
+    log_p = tails.two_sided(*tails.covariance(c, s1, s2, rho, dof))
+    error = s1 * s2 * math.sqrt((1 + rho * rho) / dof)
+    return Finding(rho * s1 * s2, c, error, log_p, lambda level: power.covariance(level, s1, s2, rho, dof))
+
+
+def quadratic(estimate: float, weights: ArrayLike, dof: int, shift: float = 0.0) -> Finding:
+    """An average over `dof` paths of a quadratic form in normals with eigenvalues `weights`, plus `shift`: exact."""
+    w = np.asarray(weights, dtype=float) / dof
+    log_p = tails.two_sided(*tails.weighted_chi_squares(estimate - shift, w, dof))
+    second, third, fourth = (float(np.sum(w**k)) * dof for k in (2, 3, 4))
+    error = math.sqrt(2 * second)
+    skew, excess = 8 * third / error**3, 48 * fourth / error**4
+    return Finding(
+        float(w.sum()) * dof + shift,
+        estimate,
+        error,
+        log_p,
+        lambda level: power.shift(level, error, abs(skew), excess),
+    )
+
+
+@dataclass(frozen=True)
+class Sample:
+    """What a central limit theorem needs of n independent numbers: mean, sd, skewness, excess kurtosis."""
+
+    n: int
+    mean: float
+    sd: float
+    skew: float
+    excess: float
+
+    @classmethod
+    def from_powers(cls, n: int, sums: Sequence[float]) -> Sample:
+        """From the sums of the first four powers."""
+        m1, m2, m3, m4 = (s / n for s in sums)
+        v = max(m2 - m1 * m1, 0.0)
+        if v <= 0.0:
+            return cls(n, m1, 0.0, 0.0, 0.0)
+        third = m3 - 3 * m1 * m2 + 2 * m1**3
+        fourth = m4 - 4 * m1 * m3 + 6 * m1 * m1 * m2 - 3 * m1**4
+        return cls(n, m1, math.sqrt(v * n / max(n - 1, 1)), third / v**1.5, fourth / v**2 - 3)
+
+
+def sample_mean(sample: Sample, theory: float, sd: float | None = None) -> Finding:
+    """The mean of n independent numbers that need not be normal; `sample.mean` is relative to `theory`.
+
+    With the theoretical `sd` the tail is that of a matched chi-square; without it, the self-normalised sum's.
+    """
+    n = sample.n
+    root = math.sqrt(n)
+    if sd is not None:
+        error, skew = sd / root, sample.skew / root
+        log_p = tails.two_sided(*tails.pearson3(sample.mean / error, skew))
+        gauge = abs(sample.excess - 1.5 * sample.skew**2) / (24 * n)
+        order = 4
+    else:
+        error, skew = sample.sd / root, sample.skew / root
+        t = sample.mean / error
+        x = t / math.sqrt((n - 1 + t * t) / n)
+        log_p = tails.two_sided(*tails.self_normalised(x, sample.skew, n))
+        gauge = abs(sample.skew) / (3 * root)
+        order = 3
+
+    def doubt(level: float) -> str | None:
+        if n < FEW_PATHS:
+            return f"only {n} paths and no exact law for this estimate"
+        if gauge * power.needed(level) ** order > _TRUSTED:
+            return f"{n} paths are too few for the skewed tail that a p of {level:.1g} lies in"
+        return None
+
+    return Finding(theory, theory + sample.mean, error, log_p, lambda level: power.shift(level, error), doubt)
+
+
+def squares(q: float, dof: int, n: int) -> Finding:
+    """A sum of `dof` squared unit normals; the estimate is the root mean square departure a case (n cases)."""
+    log_p = tails.chi_square(q, dof)[0]
+    return Finding(
+        0.0,
+        math.sqrt(max(q - dof, 0.0) / n),
+        math.sqrt(math.sqrt(2 * dof) / n),
+        log_p,
+        lambda level: math.sqrt(power.chi_square(level, dof) / n),
+    )
+
+
+def excess_doubt(excess: float, n: int, what: str) -> Callable[[float], str | None]:
+    """Doubt for a sum of n terms whose excess kurtosis is not part of the p (Edgeworth's next term)."""
+
+    def doubt(level: float) -> str | None:
+        if excess * power.needed(level) ** 4 / (24 * n) > _TRUSTED:
+            return f"{n} {what} are too few for the tail that a p of {level:.1g} lies in"
+        return None
+
+    return doubt
+
+
+def with_doubt(finding: Finding, doubt: Callable[[float], str | None]) -> Finding:
+    return replace(finding, doubt=doubt)
+
+
+def reach_of_worst(level: float, n: int) -> float:
+    """Size in standard errors that the worst of n independent statistics finds 9 times in 10."""
+    return power.shift(-math.expm1(math.log1p(-level) / n), 1.0)
+
+
+def worst(log_ps: NDArray) -> float:
+    """log p of the smallest of independent exact p-values (Sidak 1967)."""
+    low = float(np.min(log_ps))
+    if low > -30:
+        return math.log(-math.expm1(log_ps.size * math.log1p(-math.exp(low)))) if low < 0 else 0.0
+    return min(0.0, low + math.log(log_ps.size))
+
+
+def anderson_darling(u: NDArray) -> Finding:
+    """Uniforms against the uniform law. Theory is the expected A² = 1; 0.7611 its standard deviation."""
+    a2 = tails.anderson_darling_statistic(u)
+
+    def detect(level: float) -> float:
+        # A shift sends sqrt(n) times its first Legendre coefficient into the leading chi-square, of weight 1/2.
+        reach = math.sqrt(2 * (-math.log(level) + 0.5)) + 1.2815515655446004
+        return reach * reach / 2
+
+    return Finding(1.0, a2, 0.7611, tails.anderson_darling(a2), detect)
+
+
+def kolmogorov(distance: float, n: int) -> Finding:
+    """The largest gap between an empirical and the stated distribution function."""
+    expected = 0.8687311606 / math.sqrt(n)  # sqrt(pi/2) log 2, the mean of the limit law
+    return Finding(0.0, distance, expected, tails.kolmogorov(distance, n), lambda level: power.gap(level, n))
+
+
+def share(k: int, n: int, p: float) -> Finding:
+    """k of n independent cases, each of probability p: exact (binomial)."""
+    from scipy.stats import binom
+
+    def log(tail: float, side: float) -> float:
+        return math.log(tail) if tail > 1e-290 else -n * _divergence(side, p)
+
+    upper, lower = log(float(binom.sf(k - 1, n, p)), k / n), log(float(binom.cdf(k, n, p)), k / n)
+    return Finding(
+        p,
+        k / n,
+        math.sqrt(p * (1 - p) / n),
+        tails.two_sided(upper, lower),
+        lambda level: power.share(level, p, n),
+    )
+
+
+def _divergence(a: float, p: float) -> float:
+    """Relative entropy of two coins, the exponent of Chernoff's bound."""
+    total = a * math.log(a / p) if a > 0 else 0.0
+    return total + ((1 - a) * math.log((1 - a) / (1 - p)) if a < 1 else 0.0)

@@ -1,0 +1,215 @@
+"""The tests of recovered shocks: level, spread, memory, clustering, law, and independence between paths."""
+
+from __future__ import annotations
+
+import math
+from collections import Counter
+from collections.abc import Iterator
+
+import numpy as np
+from numpy.typing import NDArray
+
+from procgen.checks import judge, tails
+from procgen.checks.judge import Finding
+from procgen.checks.scores import largest_gap
+from procgen.checks.shocks import CLUSTER_LAGS, CrossSums, ShockSums
+from procgen.checks.verdict import Check
+
+_EXACT_BELOW = 5_000  # products fewer than this are judged by their exact law
+_CLUSTER_SKEW = 0.408163  # (E s^3)^2 of a cluster score s = sqrt(5) P2, which is (2 sqrt(5) / 7)^2
+_CLUSTER_EXCESS = 8.44  # excess of the sum of lagged products of cluster scores, a pair
+
+
+def shock_checks(series: str, sums: ShockSums, source: str) -> Iterator[Check]:
+    """Every test of one series' shocks; `source` says in words how they were recovered."""
+    if sums.n == 0:
+        yield Check(
+            series, "recovered shocks", "", "law", outcome="untestable", note="no shock could be recovered"
+        )
+        return
+    yield from _level_and_spread(series, sums, source)
+    yield from _memory(series, sums)
+    yield from _clustering(series, sums)
+    yield from _law(series, sums)
+    yield from _by_step(series, sums)
+    yield from _between_paths(series, sums)
+
+
+def _level_and_spread(series: str, sums: ShockSums, source: str) -> Iterator[Check]:
+    n, law = sums.n, sums.scores.law
+    mean, second = sums.sums / n
+    root = math.sqrt(n)
+    components = sums.scores.component_sums(sums.counts)
+    if sums.scores.gaussian:
+        yield Check.of(
+            series, "shocks: mean", "all steps", "level", judge.normal_mean(mean, 0.0, 1.0, n), source
+        )
+        if n > 1:
+            finding = judge.variance((second - mean * mean) * n / (n - 1), 1.0, n - 1)
+            yield Check.of(series, "shocks: variance", "all steps", "spread", finding)
+        return
+    if no_big_jump(law, n, 1):
+        skew = float(law.skewness or 0.0) / root
+        yield Check.of(
+            series, "shocks: mean", "all steps", "level", judge.unit(mean * root, 1 / root, skew=skew), source
+        )
+    else:
+        yield Check.of(
+            series, "shocks: level score", "all steps", "level", judge.unit(components[0], 1 / root), source
+        )
+    moments = [law.moment(k) for k in (2, 3, 4, 6)] if no_big_jump(law, n, 2) else [None]
+    if all(m is not None for m in moments):
+        _, _, m4, m6 = moments
+        # (z - mean)² − 1 has third moment m6 − 3 m4 + 2 up to terms in the mean, which is 0.
+        sd = math.sqrt(m4 - 1)
+        skew = (m6 - 3 * m4 + 2) / sd**3 / root
+        spread = (second - mean * mean - 1) * root / sd
+        finding = judge.unit(spread, sd / root, theory=1.0, skew=skew)
+        yield Check.of(series, "shocks: variance", "all steps", "spread", finding)
+    else:
+        finding = judge.unit(components[1], 1 / root)
+        yield Check.of(series, "shocks: spread score", "all steps", "spread", finding)
+
+
+def no_big_jump(law, n: int, order: int, level: float = 1e-6) -> bool:
+    """Whether no single |z|^order can carry the sum of n of them to the tail that a p of `level` lies in."""
+    m = law.moment(2 * order)
+    if m is None or law.moment(3 * order) is None:
+        return False
+    x = 5.0 * math.sqrt(max(m - (law.moment(order) or 0.0) ** 2, 0.0) * n)
+    reach = x ** (1 / order)
+    distribution = law.distribution()
+    return n * float(distribution.sf(reach) + distribution.cdf(-reach)) < 0.1 * level
+
+
+def _memory(series: str, sums: ShockSums) -> Iterator[Check]:
+    for i, lag in enumerate(sums.lags):
+        pairs, total = sums.memory[:, i]
+        if pairs:
+            finding = _lag_finding(sums.chains, lag, int(pairs), total)
+            yield Check.of(series, "shocks: autocorrelation", f"lag {lag}", "memory", finding)
+
+
+def _lag_finding(chains: Counter[int], lag: int, pairs: int, total: float) -> Finding:
+    """Sum of g[t] g[t-lag] over runs of the given lengths: a quadratic form in normals."""
+    if pairs >= _EXACT_BELOW:
+        return judge.unit(total / math.sqrt(pairs), 1 / math.sqrt(pairs))
+    weights, dof = _chain_weights(chains, lag)
+    upper, lower = tails.weighted_chi_squares(total, weights, dof)
+    plain = judge.unit(total / math.sqrt(pairs), 1 / math.sqrt(pairs))
+    return Finding(0.0, total / pairs, plain.standard_error, tails.two_sided(upper, lower), plain.detect)
+
+
+def _chain_weights(chains: Counter[int], lag: int) -> tuple[NDArray, NDArray]:
+    """Eigenvalues cos(pi j / (m + 1)) of the products along a chain of m, and how often each occurs."""
+    weights, dof = [], []
+    for length, paths in chains.items():
+        links: Counter[int] = Counter(len(range(start, length, lag)) for start in range(min(lag, length)))
+        for m, count in links.items():
+            weights.append(np.cos(np.pi * np.arange(1, m + 1) / (m + 1)))
+            dof.append(np.full(m, float(count * paths)))
+    return np.concatenate(weights), np.concatenate(dof)
+
+
+def _clustering(series: str, sums: ShockSums) -> Iterator[Check]:
+    for i, lag in enumerate(CLUSTER_LAGS):
+        pairs, total = sums.cluster[:, i]
+        if pairs:
+            yield Check.of(series, "shocks: clustering", f"lag {lag}", "clustering", _product(pairs, total))
+    pairs, total = sums.asymmetry
+    if pairs:
+        yield Check.of(series, "shocks: asymmetric clustering", "lag 1", "clustering", _product(pairs, total))
+
+
+def _product(pairs: float, total: float) -> Finding:
+    """A sum of products of bounded scores; too few of them cannot be judged far out."""
+    root = math.sqrt(pairs)
+    plain = judge.unit(total / root, 1 / root, skew=_CLUSTER_SKEW / root)
+    return judge.Finding(
+        plain.theory,
+        plain.estimate,
+        plain.standard_error,
+        plain.log_p,
+        plain.detect,
+        judge.excess_doubt(_CLUSTER_EXCESS, int(pairs), "pairs of shocks"),
+    )
+
+
+def _law(series: str, sums: ShockSums) -> Iterator[Check]:
+    components = sums.scores.component_sums(sums.counts)[2:]
+    finding = judge.squares(float(components @ components), len(components), sums.n)
+    finding = judge.with_doubt(finding, judge.excess_doubt(4.0, sums.n, "shocks"))
+    yield Check.of(series, "shocks: shape of the law", "all steps", "law", finding)
+    gap = judge.kolmogorov(largest_gap(sums.counts), sums.n)
+    yield Check.of(series, "shocks: distribution function", "all steps", "law", gap)
+
+
+def _by_step(series: str, sums: ShockSums) -> Iterator[Check]:
+    """Whether some step, or stretch of steps, has another level or spread than the rest."""
+    from scipy.special import ndtri
+
+    count, total, square = sums.profile[:, sums.profile[0] > 0]
+    if count.size < 2 or count.min() < 2:
+        return
+    n = sums.n
+    level = total / np.sqrt(count)
+    upper, lower = chi_square_logs(square - total**2 / count, count - 1)
+    spread = np.where(
+        upper < lower, -ndtri(np.exp(np.maximum(upper, -700))), ndtri(np.exp(np.maximum(lower, -700)))
+    )
+    for what, kind, z in (("level", "level", level), ("spread", "spread", spread)):
+        yield Check.of(
+            series, f"shocks: {what} by step", "sum over steps", kind, judge.squares(float(z @ z), z.size, n)
+        )
+        yield Check.of(series, f"shocks: {what} by step", *_worst_step(sums, z, kind))
+
+
+def _worst_step(sums: ShockSums, z: NDArray, kind: str) -> tuple[str, str, Finding]:
+    from scipy.special import log_ndtr
+
+    at = int(np.argmax(np.abs(z)))
+    logs = np.minimum(0.0, math.log(2) + log_ndtr(-np.abs(z)))
+    places = np.flatnonzero(sums.profile[0] > 0)
+    step = int(places[at]) * sums.width
+    probe = f"step {step}" if sums.width == 1 else f"steps {step}–{step + sums.width - 1}"
+    finding = Finding(
+        0.0, float(z[at]), 1.0, judge.worst(logs), lambda level: judge.reach_of_worst(level, z.size)
+    )
+    return f"worst: {probe}", kind, finding
+
+
+def chi_square_logs(q: NDArray, dof: NDArray) -> tuple[NDArray, NDArray]:
+    """Vectors of (log upper, log lower) chi-square tails; -700 stands for what underflows."""
+    from scipy.special import gammainc, gammaincc
+
+    with np.errstate(divide="ignore"):
+        upper, lower = np.log(gammaincc(dof / 2, q / 2)), np.log(gammainc(dof / 2, q / 2))
+    return np.maximum(upper, -700.0), np.maximum(lower, -700.0)
+
+
+def _between_paths(series: str, sums: ShockSums) -> Iterator[Check]:
+    number, level, spread = sums.paths
+    if number >= 2:
+        finding = judge.squares(float(level), int(number), sums.n)
+        yield Check.of(series, "shocks: level by path", "sum over paths", "level", finding)
+        finding = judge.squares(float(spread), int(number), sums.n)
+        yield Check.of(series, "shocks: spread by path", "sum over paths", "spread", finding)
+    pairs = sum((width - 1) * steps for width, steps in sums.rows.items())
+    if pairs:
+        finding = _lag_finding(sums.rows, 1, pairs, sums.neighbours)
+        yield Check.of(series, "shocks: neighbouring paths", "path − 1", "dependence", finding)
+
+
+def cross_checks(pair: str, sums: CrossSums, expected: dict[int, float], note: str = "") -> Iterator[Check]:
+    """Correlations between the shocks of two series at each lag, against those stated."""
+    for lag in sums.lags:
+        n, total = sums.sums[lag]
+        if not n:
+            continue
+        rho = expected.get(lag, 0.0)
+        # Var of the sum over n: 1 + c(lag)^2 when only this lag is correlated, and its neighbours' share otherwise.
+        others = sum(expected.get(lag + j, 0.0) * expected.get(lag - j, 0.0) for j in range(-50, 51) if j)
+        size = max(2, round(n * (1 + rho * rho) / max(1 + rho * rho + others, 0.1)))
+        finding = judge.covariance(total / n, 1.0, 1.0, rho, size)
+        probe = "same step" if lag == 0 else f"lag {lag:+d}"
+        yield Check.of(pair, "shocks: correlation between series", probe, "dependence", finding, note)

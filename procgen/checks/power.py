@@ -1,0 +1,87 @@
+"""Detectable sizes: the smallest departure that a check finds 9 times in 10 at a given level.
+
+`level` is the two-sided level that one check works at (the family's level divided by the number of checks).
+Departures are upward ones, in the unit of the check's estimate.
+"""
+
+from __future__ import annotations
+
+import math
+
+POWER = 0.9
+_Z_POWER = 1.2815515655446004  # normal quantile of 0.9
+
+
+def needed(level: float) -> float:
+    """The normal quantile that a two-sided check must pass at `level`."""
+    from scipy.special import ndtri
+
+    return float(-ndtri(level / 2))
+
+
+def critical(level: float, skew: float = 0.0, excess: float = 0.0) -> float:
+    """Upper critical point of a standardised statistic with small skewness and excess kurtosis.
+
+    Cornish & Fisher (1938), to the order 1/n.
+    """
+    z = needed(level)
+    return z + skew / 6 * (z * z - 1) + excess / 24 * (z**3 - 3 * z) - skew * skew / 36 * (2 * z**3 - 5 * z)
+
+
+def shift(level: float, error: float, skew: float = 0.0, excess: float = 0.0) -> float:
+    """Detectable shift of an estimate whose standard error does not change under the departure."""
+    return error * (critical(level, skew, excess) + _Z_POWER)
+
+
+def variance(level: float, sigma2: float, dof: int) -> float:
+    """Detectable excess of a normal variance over `sigma2`, exactly."""
+    from scipy.stats import chi2
+
+    return sigma2 * (float(chi2.isf(level / 2, dof)) / float(chi2.ppf(1 - POWER, dof)) - 1)
+
+
+def covariance(level: float, s1: float, s2: float, rho: float, n: int) -> float:
+    """Detectable departure of a normal covariance, away from zero where it is not zero."""
+    size = s1 * s2
+    r = abs(rho)
+    up, down = (1 + r) / 2, (1 - r) / 2
+    error = math.sqrt((1 + r * r) / n)
+    skew = 8 * (up**3 - down**3) / (2 * (up**2 + down**2)) ** 1.5 / math.sqrt(n)
+    excess = 48 * (up**4 + down**4) / (2 * (up**2 + down**2)) ** 2 / n
+    reach = error * critical(level, skew, excess)
+    departure = reach
+    for _ in range(60):
+        departure = reach + _Z_POWER * math.sqrt((1 + (r + departure) ** 2) / n)
+    return size * departure
+
+
+def chi_square(level: float, dof: int) -> float:
+    """Detectable noncentrality of a sum of `dof` squares of unit normals (one-sided level)."""
+    from scipy.optimize import brentq
+    from scipy.stats import chi2, ncx2
+
+    point = float(chi2.isf(level, dof))
+    start = (needed(2 * level) + _Z_POWER) ** 2 + 10 * math.sqrt(dof)
+    high = start
+    while ncx2.sf(point, dof, high) < POWER:
+        high *= 2
+    return float(brentq(lambda x: ncx2.sf(point, dof, x) - POWER, 0.0, high, rtol=1e-6))
+
+
+def gap(level: float, n: int) -> float:
+    """A distance between distribution functions that Kolmogorov's test finds at least 9 times in 10.
+
+    At the point of the largest gap the empirical share is binomial, so its spread is at most 1/(2 sqrt n).
+    """
+    return math.sqrt(math.log(2 / level) / (2 * n)) + _Z_POWER / (2 * math.sqrt(n))
+
+
+def share(level: float, p: float, n: int) -> float:
+    """Detectable departure of a share from p among n independent cases."""
+    error = math.sqrt(p * (1 - p) / n)
+    reach = error * critical(level, (1 - 2 * p) / math.sqrt(n * p * (1 - p)))
+    departure = reach
+    for _ in range(60):
+        other = min(1.0, p + departure)
+        departure = reach + _Z_POWER * math.sqrt(max(other * (1 - other), 0.0) / n)
+    return departure

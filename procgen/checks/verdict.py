@@ -1,0 +1,212 @@
+"""Checks become a verdict: Holm's procedure over the family, outcomes, and who departs from what in plain words."""
+
+from __future__ import annotations
+
+import math
+from collections import Counter
+from collections.abc import Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+from numpy.typing import ArrayLike, NDArray
+
+from procgen.checks.judge import Finding
+
+KINDS = ("structure", "level", "spread", "memory", "clustering", "law", "dependence")
+COLUMNS = (
+    "series", "what", "probe", "theory", "estimate", "standard_error", "p", "detectable", "outcome", "note",
+)  # fmt: skip
+
+
+@dataclass
+class Check:
+    """One row of a verdict.
+
+    Attributes
+    ----------
+    series, what, probe : str
+        Which series (two joined by " ~ "), what is compared, and where.
+    kind : str
+        One of KINDS: the sort of departure that it would show.
+    theory, estimate, standard_error : float or None
+    log_p : float or None
+        Natural logarithm of p; None for exact facts and for what is not judged.
+    outcome : str
+        "agrees", "departs", "untestable" or "reported"; "" until Holm has spoken.
+    """
+
+    series: str
+    what: str
+    probe: str
+    kind: str
+    theory: float | None = None
+    estimate: float | None = None
+    standard_error: float | None = None
+    log_p: float | None = None
+    outcome: str = ""
+    note: str = ""
+    finding: Finding | None = None
+    detectable: float | None = None
+
+    @classmethod
+    def of(cls, series: str, what: str, probe: str, kind: str, finding: Finding, note: str = "") -> Check:
+        """A check to be judged."""
+        return cls(
+            series, what, probe, kind, finding.theory, finding.estimate, finding.standard_error, finding.log_p,
+            note=note, finding=finding,
+        )  # fmt: skip
+
+    @classmethod
+    def fact(cls, series: str, what: str, probe: str, fault: str, note: str = "", **numbers: float) -> Check:
+        """A fact that holds or not, without chance: `fault` is empty when it holds."""
+        outcome = "departs" if fault else "agrees"
+        return cls(series, what, probe, "structure", outcome=outcome, note=fault or note, **numbers)
+
+    @property
+    def p(self) -> float | None:
+        return None if self.log_p is None else math.exp(self.log_p)
+
+    def row(self) -> dict[str, Any]:
+        """The check as plain data: the keys of COLUMNS, None for what is not known."""
+        values = {name: getattr(self, name) for name in COLUMNS}
+        return {k: _plain(v) for k, v in values.items()}
+
+
+def _plain(value: Any) -> Any:
+    if isinstance(value, float | np.floating):
+        return float(value) if math.isfinite(value) else None
+    return value
+
+
+def holm(p: ArrayLike) -> NDArray[np.float64]:
+    """Adjusted p-values: the family-wise level at which each would be rejected.
+
+    Holm (1979), A simple sequentially rejective multiple test procedure.
+    """
+    p = np.asarray(p, dtype=float)
+    order = np.argsort(p, kind="stable")
+    scaled = p[order] * np.arange(p.size, 0, -1)
+    adjusted = np.empty_like(p)
+    adjusted[order] = np.minimum(1.0, np.maximum.accumulate(scaled)) if p.size else scaled
+    return adjusted
+
+
+class Verdict:
+    """Whether an ensemble has the behaviour that its spec states.
+
+    Attributes
+    ----------
+    agrees : bool or None
+        True: no check departs. False: at least one does. None: nothing could be judged.
+    checks : pandas.DataFrame
+        One row a check, in the columns of `validate --json`, departures first.
+    counts : dict
+        Outcome -> number of checks.
+    headline : list of str
+        The departures in plain words, the largest disagreement first.
+    false_alarm : float
+        Probability that a true ensemble is said to depart, at most.
+    """
+
+    def __init__(self, rows: Sequence[Check], false_alarm: float, about: dict[str, Any] | None = None):
+        self.false_alarm = false_alarm
+        self.about = about or {}
+        self.rows = list(rows)
+        _judge(self.rows, false_alarm)
+        self.rows.sort(key=_rank)
+        self.counts = dict(Counter(row.outcome for row in self.rows))
+
+    @property
+    def agrees(self) -> bool | None:
+        if self.counts.get("departs"):
+            return False
+        return True if any(row.outcome == "agrees" and row.log_p is not None for row in self.rows) else None
+
+    @property
+    def verdict(self) -> str:
+        """ "agrees", "departs" or "untestable"."""
+        return {True: "agrees", False: "departs", None: "untestable"}[self.agrees]
+
+    @property
+    def checks(self) -> Any:
+        import pandas as pd
+
+        return pd.DataFrame([row.row() for row in self.rows], columns=list(COLUMNS))
+
+    @property
+    def headline(self) -> list[str]:
+        return headline(self.rows)
+
+    def to_dict(self) -> dict[str, Any]:
+        """The verdict as plain data, in the shape of `validate --json`."""
+        return {
+            "verdict": self.verdict,
+            "false_alarm": self.false_alarm,
+            "checks": [row.row() for row in self.rows],
+        }
+
+    def to_text(self, rows: int = 8) -> str:
+        """The verdict for a terminal, with the `rows` smallest p."""
+        from procgen.report.text import verdict_text
+
+        return verdict_text(self, rows)
+
+    def to_html(self, path: str | Path) -> Path:
+        """Write the verdict as one self-contained page; returns its path."""
+        from procgen.report.html import write_verdict
+
+        return write_verdict(self, Path(path))
+
+    def __repr__(self) -> str:
+        return f"Verdict({self.verdict}, {', '.join(f'{n} {what}' for what, n in self.counts.items())})"
+
+
+def _judge(rows: list[Check], false_alarm: float) -> None:
+    """Outcomes and detectable sizes. What cannot be trusted down to the level needed leaves the family first."""
+    judged = [row for row in rows if row.log_p is not None and not row.outcome]
+    for _ in range(2):
+        level = false_alarm / max(1, len(judged))
+        for row in judged:
+            reason = row.finding.doubt(level) if row.finding else None
+            if reason:
+                row.outcome, row.note, row.log_p = "untestable", _join(reason, row.note), None
+        judged = [row for row in judged if not row.outcome]
+    level = false_alarm / max(1, len(judged))
+    adjusted = holm([row.p for row in judged])
+    for row, p in zip(judged, adjusted, strict=True):
+        row.outcome = "departs" if p <= false_alarm else "agrees"
+        row.detectable = row.finding.detect(level) if row.finding else None
+
+
+def _join(*parts: str) -> str:
+    return "; ".join(part for part in parts if part)
+
+
+def _rank(row: Check) -> tuple[int, float]:
+    order = {"departs": 0, "agrees": 1, "untestable": 2, "reported": 3}
+    if row.outcome == "departs" and row.log_p is None:
+        return 0, -math.inf
+    return order[row.outcome], row.log_p if row.log_p is not None else 0.0
+
+
+def headline(rows: Sequence[Check], most: int = 6) -> list[str]:
+    """Departures by series and kind in plain words, structure first, then the largest disagreement first."""
+    from procgen.checks.words import sentence
+
+    groups: dict[tuple[str, str], list[Check]] = {}
+    for row in rows:
+        if row.outcome == "departs":
+            groups.setdefault((row.series, row.kind), []).append(row)
+    order = sorted(
+        groups.values(), key=lambda group: (group[0].kind != "structure", min(map(_strength, group)))
+    )
+    lines = [sentence(sorted(group, key=_strength)) for group in order[:most]]
+    if len(order) > most:
+        lines.append(f"and {len(order) - most} more kinds of departure, see the table")
+    return lines
+
+
+def _strength(row: Check) -> float:
+    return -math.inf if row.log_p is None else row.log_p
