@@ -6,7 +6,7 @@ import numpy as np
 
 from procgen.chance.kernel import kernel
 from procgen.spec.declare import Parameter, Reals, Record
-from procgen.terms.base import LAW, SD, TOTAL_SD, Ahead, Term, Unknown, number, one_spread, rows, signed
+from procgen.terms.base import LAW, SD, TOTAL_SD, Ahead, Term, Unknown, number, one_spread, rows, signed, without_gap
 from procgen.terms.start import JointStart, Member, companion, decay_length, partial_autocorrelations
 
 FORGOTTEN = 1e-9
@@ -72,7 +72,10 @@ class Arma(Term):
         phi, theta, before = values.get("phi", ()), values.get("theta", ()), values["before"]
         if before is not None:
             if len(before["x"]) < len(phi):
-                yield "before", f"expected {len(phi)} past values in `x` (one a coefficient), got {len(before['x'])}"
+                yield (
+                    "before",
+                    f"expected {len(phi)} past values in `x` (one a coefficient), got {len(before['x'])}",
+                )
             if len(before["shocks"]) < len(theta):
                 yield (
                     "before",
@@ -149,17 +152,18 @@ class Arma(Term):
 
     def invert(self, values, known, state, at):
         p, q = len(self.phi), len(self.theta)
+        values, gap = without_gap(values, 0.0)
         if state is None:
+            state = {"x": np.zeros((p, 1)), "a": np.zeros((q, 1)), "skip": np.array([0])}
+        skip = int(state["skip"][0])
+        if gap or at[0] == 0:  # the unknown past must be forgotten first
             try:
-                length = decay_length(companion([-c for c in self.theta], (), q, 0)[0], FORGOTTEN) if q else 0
+                skip = gap + p + (decay_length(companion([-c for c in self.theta], (), q, 0)[0], FORGOTTEN) if q else 0)
             except ValueError:
                 return Unknown("the moving-average part is not invertible: its shocks cannot be told from the values")
-            state = {"x": np.full((p, 1), np.nan), "a": np.zeros((q, 1)), "skip": np.array([p + length])}
-            state["x"][:] = 0.0
         x = np.concatenate([_wide(state["x"], values), values])
         a = _buffer(state["a"], values)
         inversion(np.array(self.phi), np.array(self.theta), x, a)
-        skip = int(state["skip"][0])
         shocks = a[q:].copy()
         shocks[:skip] = np.nan
         left = np.array([max(0, skip - len(values))])
@@ -173,9 +177,7 @@ class Arma(Term):
         pulse[:1] = 1.0
         psi, _ = self.recurse((pulse,), {"x": np.zeros((p, 1)), "a": np.zeros((q, 1))}, steps)
         squares = psi[:, 0] ** 2
-        variance = np.stack(
-            [sum(squares[j] * noise.variance[h - j] for j in range(h + 1)) for h in range(len(steps))]
-        )
+        variance = np.stack([sum(squares[j] * noise.variance[h - j] for j in range(h + 1)) for h in range(len(steps))])
         return Ahead(mean, variance)
 
     def moments(self, axis, noise):

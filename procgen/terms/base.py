@@ -198,6 +198,15 @@ def rows(values: Sequence[float]) -> Array:
     return np.array(values, dtype=np.float64).reshape(-1, 1)
 
 
+def without_gap(values: Array, fill: float) -> tuple[Array, int]:
+    """Values with their unknown first rows (NaN) filled, and how many rows those are; for inversions."""
+    gap = int(np.count_nonzero(np.isnan(values[:, 0])))
+    if gap:
+        values = values.copy()
+        values[:gap] = fill
+    return values, gap
+
+
 def number(x: float) -> str:
     """A coefficient as it is written in an equation: shortest digits, a true minus sign."""
     return f"{x:.6g}".replace("-", "−")

@@ -8,7 +8,7 @@ import numpy as np
 
 from procgen.chance.kernel import kernel
 from procgen.spec.declare import Flag, Parameter, Real, Reals, Record
-from procgen.terms.base import LAW, Ahead, Draw, Term, number, rows, signed
+from procgen.terms.base import LAW, Ahead, Draw, Term, number, rows, signed, without_gap
 from procgen.terms.start import companion, decay_length
 
 FORGOTTEN = 1e-9
@@ -49,10 +49,19 @@ ALPHA = Parameter("alpha", "α", Reals(at_least=0), "weights of e²[t−1], e²[
 BETA = Parameter("beta", "β", Reals(at_least=0), "weights of h[t−1], h[t−2], …", default=())
 OMEGA = Parameter("omega", "ω", Real(above=0), "the constant in the variance", default=None, unit="series²")
 SD = Parameter(
-    "sd", "σ", Real(above=0), "unconditional standard deviation, instead of `omega`", default=None, unit="series"
+    "sd",
+    "σ",
+    Real(above=0),
+    "unconditional standard deviation, instead of `omega`",
+    default=None,
+    unit="series",
 )
 INFINITE = Parameter(
-    "allow_infinite_variance", "", Flag(), "run a strictly stationary garch without a variance on purpose", default=False
+    "allow_infinite_variance",
+    "",
+    Flag(),
+    "run a strictly stationary garch without a variance on purpose",
+    default=False,
 )
 BEFORE = Parameter(
     "before",
@@ -60,8 +69,12 @@ BEFORE = Parameter(
     Record(
         Parameter("variance", "h", Reals(above=0), "variances before step 0, oldest first", unit="series²"),
         Parameter(
-            "shocks", "e", Reals(), "values before step 0, oldest first; without them their squares are h",
-            default=(), unit="series",
+            "shocks",
+            "e",
+            Reals(),
+            "values before step 0, oldest first; without them their squares are h",
+            default=(),
+            unit="series",
         ),
     ),
     "what came before step 0, to leave from a known variance instead of the stationary law",
@@ -88,7 +101,10 @@ class Garch(Term):
             yield "omega", "expected `omega` or `sd` (the unconditional one), exactly one of them"
         if persistence >= 1:
             if values["sd"] is not None:
-                yield "sd", f"alpha + beta is {number(persistence)}: there is no unconditional sd; give `omega`"
+                yield (
+                    "sd",
+                    f"alpha + beta is {number(persistence)}: there is no unconditional sd; give `omega`",
+                )
             if before is None:
                 yield from _without_variance(values, alpha, beta, persistence)
         if before is not None:
@@ -97,7 +113,10 @@ class Garch(Term):
             if before["shocks"] and len(before["shocks"]) < len(alpha):
                 yield "before", f"expected {len(alpha)} past shocks, got {len(before['shocks'])}"
             if not before["shocks"] and len(before["variance"]) < len(alpha):
-                yield "before", f"expected `shocks`, or {len(alpha)} past variances to stand for their squares"
+                yield (
+                    "before",
+                    f"expected `shocks`, or {len(alpha)} past variances to stand for their squares",
+                )
 
     def __init__(self, values):
         super().__init__({"beta": (), **values})
@@ -144,7 +163,9 @@ class Garch(Term):
         # Without a variance: E(β + αz²)^s < 1 for some s < 1 bounds how long the start is felt. The
         # expectation is rounded up to a power of two, which no rounding of it can move.
         factor = min(
-            self.law.expect(lambda z, s=s: (self.beta[0] + self.alpha[0] * z * z) ** s) if self._first_order() else 0.999
+            self.law.expect(lambda z, s=s: (self.beta[0] + self.alpha[0] * z * z) ** s)
+            if self._first_order()
+            else 0.999
             for s in (0.05, 0.1, 0.25, 0.5, 0.75)
         )
         return 2 ** min(16, math.ceil(math.log2(math.log(1e-12) / math.log(factor))))
@@ -180,15 +201,17 @@ class Garch(Term):
 
     def invert(self, values, known, state, at):
         p, q = len(self.alpha), len(self.beta)
+        rest = self.resting()
+        values, gap = without_gap(values, self.scale())
         if state is None:
-            length = decay_length(companion(self.beta, (), q, 0)[0], FORGOTTEN) if q else 0
-            rest = self.resting()
-            state = {"square": np.full((p, 1), rest), "h": np.full((q, 1), rest), "skip": np.array([p + length])}
+            state = {"square": np.full((p, 1), rest), "h": np.full((q, 1), rest), "skip": np.array([0])}
         square = np.concatenate([np.broadcast_to(state["square"], (p, values.shape[1])), values * values])
         h = _buffer(state["h"], values)
         variance(self.level(), np.array(self.alpha), np.array(self.beta), square, h)
         z = values / np.sqrt(h[q:])
-        skip = int(state.get("skip", [0])[0])
+        skip = int(state["skip"][0])
+        if gap or at[0] == 0:  # the variance behind the first known value must be forgotten first
+            skip = gap + p + (decay_length(companion(self.beta, (), q, 0)[0], FORGOTTEN) if q else 0)
         z[:skip] = np.nan
         left = np.array([max(0, skip - len(values))])
         return z, {"square": square[len(square) - p :].copy(), "h": h[len(h) - q :].copy(), "skip": left}

@@ -117,6 +117,11 @@ class Graph:
                 yield f"{owner}.{entry.label or entry.kind}", node
 
     @property
+    def depth(self) -> int:
+        """The most steps before step 0 that anything must be drawn from; bounds the paths drawn at a time."""
+        return max((node.head for node in self.order([*self._owners.values()])), default=0)
+
+    @property
     def portable(self) -> tuple[bool, str]:
         """Whether every value is the same bits on every machine, and why not."""
         for node in self.order():
@@ -261,7 +266,11 @@ class Graph:
         for node in reversed(order):
             if isinstance(node, Source) or id(node) in passed or node.joint is not None:
                 continue
-            for part, need in zip(node.inputs, node.term.reach(node.head), strict=False):
+            try:
+                needs = node.term.reach(node.head)
+            except ValueError as error:
+                raise SpecError((Fault(node.place, _too_slow(node, error)),)) from None
+            for part, need in zip(node.inputs, needs, strict=False):
                 part.head = max(part.head, need)
 
     def _refuse_missing_past(self, wanted: list[Node]) -> None:
@@ -288,6 +297,13 @@ def build(spec: Spec) -> Graph:
 
 
 NORMAL = Normal()
+
+
+def _too_slow(node: Node, error: ValueError) -> str:
+    return (
+        f"{node.name} begins with a burn-in, because its shocks are not Gaussian, and {error}; give `before`, a "
+        "normal law, or smaller coefficients"
+    )
 
 
 def _is_noise(node: Any) -> bool:

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from itertools import pairwise
+
 import numpy as np
 
 from procgen.spec.declare import Moment, Parameter, Real, Records
@@ -75,8 +77,11 @@ class Trend(Known):
     @classmethod
     def check(cls, values):
         places = [bend["at"] for bend in values["bends"]]
-        if any(later <= earlier for earlier, later in zip(places, places[1:], strict=False)):
-            yield "bends", "expected bends in order of time, each later than the one before; sort them by `at`"
+        if any(later <= earlier for earlier, later in pairwise(places)):
+            yield (
+                "bends",
+                "expected bends in order of time, each later than the one before; sort them by `at`",
+            )
 
     def at(self, steps):
         t = steps.astype(np.float64)
@@ -93,6 +98,7 @@ class Trend(Known):
             text += f" {signed(self.quadratic, 't²')}"
         slope = self.slope
         for bend in self.bends:
-            text += f" {signed(bend['slope'] - slope, f'max(0, t − {number(bend["at"])})')}"
+            ramp = f"max(0, t − {number(bend['at'])})"
+            text += f" {signed(bend['slope'] - slope, ramp)}"
             slope = bend["slope"]
         return text

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from procgen.spec.declare import Body, Parameter, Real, Whole
-from procgen.terms.base import Ahead, Term, Unknown, number
+from procgen.terms.base import Ahead, Term, number
 from procgen.terms.walk import accumulate
 
 OF = Parameter("of", "", Body(), "what it is applied to; a list is a sum")
@@ -19,7 +19,10 @@ class Lag(Term):
     example = "lag: {of: [{ar: {phi: 0.8, sd: 1}}], by: 3}"
     knows = "whatever is known of its body, shifted"
     composition = True
-    parameters = (OF, Parameter("by", "k", Whole(at_least=0, at_most=100_000), "how many steps earlier", default=1))
+    parameters = (
+        OF,
+        Parameter("by", "k", Whole(at_least=0, at_most=100_000), "how many steps earlier", default=1),
+    )
 
     def reach(self, head):
         return (head + self.by,)
@@ -31,9 +34,6 @@ class Lag(Term):
     def recurse(self, inputs, state, at):
         rows = np.concatenate(_same_width(state["x"], inputs[0]))
         return rows[: len(inputs[0])], {"x": rows[len(inputs[0]) :].copy()}
-
-    def invert(self, values, known, state, at):
-        return Unknown("a lag is not inverted: its body runs ahead of it")
 
     def ahead(self, steps, state, body):
         known = state["x"][: len(steps)]
@@ -80,9 +80,6 @@ class Difference(Term):
     def recurse(self, inputs, state, at):
         rows = np.concatenate(_same_width(state["x"], inputs[0]))
         return self._apply(rows), {"x": rows[len(inputs[0]) :].copy()}
-
-    def invert(self, values, known, state, at):
-        return Unknown("a difference is not inverted: the level is lost")
 
     def moments(self, axis, body):
         return body.difference(self.by, self.order)

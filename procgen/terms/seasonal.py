@@ -26,13 +26,24 @@ class Seasonal(Known):
                 Parameter("amplitude", "A", Real(), "half the height from trough to peak", unit="series"),
                 Parameter("peak", "τ", Moment(), "where it is highest", default=0.0, unit="steps"),
                 Parameter(
-                    "order", "k", Whole(at_least=1), "cycles a period; its place in the list when absent", default=None
+                    "order",
+                    "k",
+                    Whole(at_least=1),
+                    "cycles a period; its place in the list when absent",
+                    default=None,
                 ),
             ),
             "harmonic k adds A·cos(2πk(t − τ)/P)",
             default=(),
         ),
-        Parameter("profile", "", Reals(), "the values of one cycle, of equal length each", default=None, unit="series"),
+        Parameter(
+            "profile",
+            "",
+            Reals(),
+            "the values of one cycle, of equal length each",
+            default=None,
+            unit="series",
+        ),
         Parameter("first", "τ", Moment(), "where the profile begins", default=0.0, unit="steps"),
         Parameter(
             "centre",

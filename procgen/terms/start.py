@@ -21,6 +21,7 @@ from procgen.chance.portable import cholesky, matmul
 
 Array = np.ndarray
 NEGLIGIBLE = 1e-12
+LONGEST = 2**19  # steps of burn-in; 16 paths of it fit in memory
 
 
 def partial_autocorrelations(phi: Sequence[float]) -> list[float] | None:
@@ -74,8 +75,8 @@ def decay_length(a: Array, negligible: float = NEGLIGIBLE) -> int:
     while np.max(np.abs(powers[-1])) > negligible:
         powers.append(matmul(powers[-1], powers[-1]))
         n *= 2
-        if n > 2**26:
-            raise ValueError("the recursion forgets its start too slowly for a burn-in (over 6e7 steps)")
+        if n > LONGEST:
+            raise ValueError(f"the recursion still feels its start after {LONGEST:,} steps")
     if n >= 4:
         three_quarters = matmul(powers[-2], powers[-3])
         if np.max(np.abs(three_quarters)) <= negligible:
@@ -113,9 +114,7 @@ class JointStart:
     def _covariance(self, extra: int) -> tuple[Array, list[int], list[int]]:
         """S of all members to `extra` more depth; the indices of the core, and of the newest-first rest."""
         depths = [(m.p + extra, m.q + extra if m.q else 0) for m in self.members]
-        systems = [
-            companion(m.phi, m.theta, *depth) for m, depth in zip(self.members, depths, strict=True)
-        ]
+        systems = [companion(m.phi, m.theta, *depth) for m, depth in zip(self.members, depths, strict=True)]
         offsets = np.concatenate([[0], np.add.accumulate([p + q for p, q in depths])])
         s = np.zeros((offsets[-1], offsets[-1]))
         for i, (ai, bi) in enumerate(systems):

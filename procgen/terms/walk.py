@@ -91,4 +91,3 @@ class RandomWalk(Term):
     def equation(self, *inputs):
         drift = f" {signed(self.drift, '')}" if self.drift else ""
         return f"x[t] = x[t−1]{drift} + a[t],  x[0] = {number(self.start)}"
-

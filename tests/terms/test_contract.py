@@ -1,0 +1,119 @@
+"""What every term must keep: addresses, tiles, state, inversion; over the whole catalogue by its own examples."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+
+from procgen.chance.kernel import available, compiling
+from procgen.terms import catalogue
+from procgen.terms.base import Unknown
+from procgen.terms.recover import forecast, recovery
+from procgen.terms.run import Run
+
+from .helpers import draw, graph_of
+
+RICH = {
+    "ar4": "{ar: {phi: [0.9, -0.4, 0.2, -0.1], total_sd: 3}}",
+    "arma32": "{arma: {phi: [0.5, -0.2, 0.1], theta: [0.4, 0.3], sd: 2}}",
+    "arma23": "{arma: {phi: [1.2, -0.4], theta: [0.4, 0.3, -0.2], sd: 2}}",
+    "student": "{ar: {phi: 0.7, sd: 1, law: {student_t: {df: 5}}}}",
+    "laplace_ma": "{ma: {theta: [0.5, 0.2], sd: 1, law: laplace}}",
+    "garch_ar": "{arma: {phi: 0.6, theta: 0.3, shock: {garch: {sd: 2, alpha: [0.1, 0.05], beta: [0.5, 0.2]}}}}",
+    "garch_walk": "{random_walk: {drift: 0.1, start: 5, shock: {garch: {omega: 0.1, alpha: 0.1, beta: 0.8}}}}",
+    "before_ar": "{ar: {phi: [0.5, 0.2], sd: 1, before: {x: [3, 4, 5]}}}",
+    "before_arma": "{arma: {phi: 0.9, theta: 0.5, sd: 1, before: {x: [4], shocks: [0.5]}}}",
+    "before_garch": "{garch: {omega: 0.1, alpha: 0.1, beta: 0.8, before: {variance: [4], shocks: [2]}}}",
+    "before_walk": "{random_walk: {sd: 2, drift: 1, before: {x: [100]}}}",
+    "lagged": "{lag: {of: [{ar: {phi: [0.6, 0.2], sd: 1}}, {constant: 3}], by: 7}}",
+    "deep_arma_lag": "{lag: {of: [{arma: {phi: 0.6, theta: [0.2, 0.1], sd: 1}}], by: 9}}",
+    "lagged_walk": "{lag: {of: [{random_walk: {sd: 1, drift: 0.2, start: 3}}], by: 4}}",
+    "lagged_garch": "{lag: {of: [{garch: {sd: 1, alpha: 0.1, beta: 0.8}}], by: 4}}",
+    "lagged_integral": "{lag: {of: [{integrate: {of: [{ar: {phi: 0.5, sd: 1}}], start: 2}}], by: 3}}",
+    "twice": "{difference: {of: [{random_walk: {sd: 1}}], by: 2, order: 2}}",
+    "prices": "{exp: [{random_walk: {sd: 0.01, drift: 0.001, start: 3}}]}",
+    "scaled": "{exp: [{ar: {phi: 0.5, sd: 0.1}, times: 2}, {constant: 1}], times: 3}",
+    "envelope": "{product: [{seasonal: {period: 7, profile: [1, 2, 3, 4, 3, 2, 1], centre: mean}}, {ar: {phi: 0.5, sd: 1}}]}",
+}
+EXAMPLES = {kind: "{" + term.example + "}" for kind, term in catalogue().items() if kind != "use"}
+CASES = {**EXAMPLES, **RICH}
+
+
+@pytest.fixture(scope="module", params=sorted(CASES))
+def case(request):
+    return request.param, graph_of(f"  x: {CASES[request.param]}")
+
+
+def test_a_value_does_not_depend_on_how_much_is_asked_for(case):
+    _, graph = case
+    whole = draw(graph, 0, 64, [60])["x"]
+    for tiles in ([1] * 5 + [55], [7, 20, 33], [59, 1]):
+        assert np.array_equal(draw(graph, 0, 64, tiles)["x"], whole)
+    assert np.array_equal(draw(graph, 0, 64, [25])["x"], whole[:25])
+    assert np.array_equal(draw(graph, 17, 30, [60])["x"], whole[:, 17:47])
+    assert np.array_equal(draw(graph, 41, 1, [60])["x"], whole[:, 41:42])
+
+
+def test_a_carried_state_goes_on_where_it_stopped(case):
+    _, graph = case
+    whole = draw(graph, 3, 20, [60])["x"]
+    first = Run(graph, 3, 20)
+    first.tile(23)
+    second = Run(graph, 3, 20)
+    second.restore(23, {name: rows.copy() for name, rows in first.state().items()})
+    assert np.array_equal(second.tile(37)["x"], whole[23:])
+
+
+@pytest.mark.skipif(not available(), reason="the speed extra is not installed")
+def test_compiled_values_are_the_plain_ones(case):
+    _, graph = case
+    plain = draw(graph, 5, 40, [30, 30])["x"]
+    with compiling(True):
+        assert np.array_equal(draw(graph, 5, 40, [30, 30])["x"], plain)
+
+
+def test_inversion_undoes_recursion(case):
+    name, graph = case
+    way = recovery(graph, "x", 20)
+    if isinstance(way, Unknown):
+        assert name not in (
+            "ar",
+            "ma",
+            "arma",
+            "garch",
+            "arch",
+            "white_noise",
+            "random_walk",
+            "integrate",
+            "exp",
+        )
+        assert len(way.reason) > 10
+        return
+    steps = 400
+    values = draw(graph, 0, 20, [steps])["x"]
+    found = np.concatenate([way.tile(part) for part in np.split(values, [1, 9, 150])])
+    u = way.source.stream.uniforms(0, 20, 0, steps)
+    drawn = way.source.law.shocks(u)
+    known = ~np.isnan(found[:, 0])
+    assert known[-200:].all() and np.array_equal(np.isnan(found), np.repeat(~known[:, None], 20, axis=1))
+    np.testing.assert_allclose(found[known], drawn[known], rtol=0, atol=3e-8)
+
+
+def test_one_step_forecast_is_what_the_shock_is_added_to(case):
+    """x[t] minus its forecast, over the forecast's spread, is the standardised shock of step t."""
+    name, graph = case
+    run = Run(graph, 0, 20)
+    run.tile(30)
+    answer = forecast(run, "x", 3)
+    if isinstance(answer, Unknown):
+        assert len(answer.reason) > 10
+        assert name not in ("ar", "ma", "arma", "garch", "white_noise", "random_walk", "trend", "sum", "lag")
+        return
+    x = run.tile(1)["x"]
+    mean, variance = np.broadcast_to(answer.mean[0], (20,)), np.broadcast_to(answer.variance[0], (20,))
+    if not variance.any():
+        np.testing.assert_allclose(x[0], mean, rtol=1e-12)
+        return
+    (source,) = [s for s in graph.sources]
+    drawn = source.law.shocks(source.stream.uniforms(0, 20, 30, 1))[0]
+    np.testing.assert_allclose((x[0] - mean) / np.sqrt(variance), drawn, rtol=1e-9, atol=1e-9)
