@@ -6,7 +6,7 @@ stamp before (31 January + 1 month is 28 or 29 February, + 2 months is 31 March)
 
 Where a calendar step falls on a local time that the change of clocks skips, it is read with the offset before
 the change (02:30 becomes 03:30); where a local time happens twice, it is the first, or the one whose offset
-`start` was written with. A whole day that a zone skipped (Samoa, 30 December 2011) shares its instant with the
+`start` was written with. A whole day that a zone skipped (Samoa, 30 December 2011) is the same instant as the
 next.
 """
 
@@ -75,9 +75,7 @@ class Grid:
     def last_year(self) -> int:
         """Return the year in which the last step ends, to within a few days; needs a start."""
         assert self.start is not None
-        return int(
-            self.start.year + Fraction(self.start.month - 1, 12) + Fraction(self.steps * self._length, YEAR)
-        )
+        return int(self.start.year + Fraction(self.start.month - 1, 12) + Fraction(self.steps * self._length, YEAR))
 
     def steps_per(self, unit: str) -> float:
         """Return how many steps a unit such as `day` or `year` holds, on average; ValueError says why not.
@@ -88,9 +86,7 @@ class Grid:
         if name == "step":
             return float(count)
         if self.every is None:
-            raise ValueError(
-                f"per: {unit} needs the length of a step; give time: {{every: 1h, …}}, or write per: step"
-            )
+            raise ValueError(f"per: {unit} needs the length of a step; give time: {{every: 1h, …}}, or write per: step")
         return float(count * LENGTH[name] / self._length)
 
     def span_steps(self, text: str) -> float:
@@ -107,9 +103,7 @@ class Grid:
             raise ValueError(f"{shown(text)} {need}")
         step = self.every[1]
         if _family(unit) != _family(step):
-            raise ValueError(
-                f"{_article(unit)} is no fixed number of steps of {self._every}; write a number of steps"
-            )
+            raise ValueError(f"{_article(unit)} is no fixed number of steps of {self._every}; write a number of steps")
         return float(count * LENGTH[unit] / self._length)
 
     def moment_steps(self, text: str) -> float:
@@ -124,14 +118,10 @@ class Grid:
                 f"got {shown(text)}"
             )
         if self.start is None or self.every is None:
-            raise ValueError(
-                f"{shown(text)} needs time: {{start: …, every: …}}; give them, or write a number of steps"
-            )
+            raise ValueError(f"{shown(text)} needs time: {{start: …, every: …}}; give them, or write a number of steps")
         if clock is not None:
             if _family(self.every[1]) != "day":
-                raise ValueError(
-                    f"a clock time is no point in steps of {self._every}; write a number of steps"
-                )
+                raise ValueError(f"a clock time is no point in steps of {self._every}; write a number of steps")
             moment = datetime.combine(self.start.date(), clock)
         assert moment is not None
         return self._position(self.resolve(moment))

@@ -25,8 +25,9 @@ from procgen.spec.domains import (
     Text,
     Whole,
 )
+from procgen.spec.model import Frozen
 from procgen.spec.tree import Tree
-from procgen.spec.words import did_you_mean, one_of, unknown_key
+from procgen.spec.words import did_you_mean, nearest, one_of, unknown_key
 
 __all__ = [
     "INVALID",
@@ -46,6 +47,7 @@ __all__ = [
     "Span",
     "Text",
     "Whole",
+    "read_each",
     "read_parameters",
 ]
 
@@ -117,6 +119,9 @@ class LawOf(Domain):
     def describe(self) -> str:
         return "a law: a name such as normal, or a name with its parameters such as {student_t: {df: 5}}"
 
+    def default(self, value: Any, reader: Reading) -> Any:
+        return reader.laws[value]() if isinstance(value, str) else value
+
     def read(self, tree: Tree, reader: Reading) -> Any:
         if isinstance(tree.value, str):
             name, inner = tree.value, None
@@ -141,7 +146,7 @@ class LawOf(Domain):
             missing = [p.name for p in law.parameters if p.required]
             if missing:
                 return reader.expected(tree, f"the law {tree.value} with its parameters {', '.join(missing)}")
-            return {p.name: p.default for p in law.parameters}
+            return {p.name: p.domain.default(p.default, reader) for p in law.parameters}
         return read_parameters(inner, law.parameters, reader)
 
 
@@ -194,36 +199,45 @@ class Body(Domain):
         return reader.body(tree)
 
 
-def read_parameters(
+def read_parameters(tree: Tree, parameters: Sequence[Parameter], reader: Reading) -> Any:
+    """Return a frozen mapping of every declared parameter, defaults filled; INVALID after reporting all faults."""
+    before = len(reader.faults)
+    values = read_each(tree, parameters, reader)
+    return Frozen(values) if len(reader.faults) == before and INVALID not in values.values() else INVALID
+
+
+def read_each(
     tree: Tree,
     parameters: Sequence[Parameter],
     reader: Reading,
     also: Iterable[str] = (),
     optional: Iterable[str] = (),
-) -> Any:
-    """Return a dict with every declared parameter read from a mapping, defaults filled; INVALID after faults.
+) -> dict[str, Any]:
+    """Return every declared parameter of a mapping, defaults filled, INVALID for each that has a fault.
 
-    Keys in `also` belong to the caller and are passed over; a required one in `optional` may be missing,
-    and is then None. All faults are reported, not only the first.
+    Keys in `also` belong to the caller and are passed over; a required one in `optional` may be missing, and is
+    then None. All faults are reported, not only the first.
     """
     if not tree.is_map:
-        what = f"a mapping with the keys {', '.join(p.name for p in parameters)}" if parameters else "{}"
-        return reader.expected(tree, what)
-    known = {p.name: p for p in parameters}
-    allowed = [*known, *also]
-    sound = True
+        names = ", ".join(p.name for p in parameters)
+        reader.expected(tree, f"a mapping with the keys {names}" if parameters else "{}")
+        return {}
+    allowed = [*(p.name for p in parameters), *also]
+    meant = set()
     for key in tree.value:
         if key not in allowed:
             reader.fault(tree.key(key), unknown_key(key, allowed))
-            sound = False
+            meant.add(nearest(key, allowed))
     values: dict[str, Any] = {}
-    for name, parameter in known.items():
+    for parameter in parameters:
+        name = parameter.name
         if name in tree.value:
             values[name] = parameter.read(tree.value[name], reader)
         elif parameter.required and name not in optional:
-            what = f"{parameter.meaning}: {parameter.domain.describe()}"
-            reader.fault(tree, f"expected the key {name} ({what})")
-            sound = False
+            if name not in meant:  # a misspelt key is one fault, not two
+                what = f"{parameter.meaning}: {parameter.domain.describe()}"
+                reader.fault(tree, f"expected the key {name} ({what})")
+            values[name] = INVALID
         else:
-            values[name] = None if parameter.required else parameter.default
-    return values if sound and all(v is not INVALID for v in values.values()) else INVALID
+            values[name] = None if parameter.required else parameter.domain.default(parameter.default, reader)
+    return values

@@ -15,7 +15,7 @@ from procgen.spec.words import bounds, did_you_mean, one_of, unquote
 if TYPE_CHECKING:
     from procgen.spec.calendar import Grid
     from procgen.spec.declare import Parameter
-    from procgen.spec.model import Entry
+    from procgen.spec.model import Entry, Fault
     from procgen.spec.tree import Tree
 
 
@@ -37,23 +37,23 @@ INVALID: Any = _Sentinel("INVALID")  # what `read` returns after it has reported
 
 
 class Reading(Protocol):
-    """What a domain needs from the reader: somewhere to report, the grid, the laws, and bodies read."""
+    """What reading needs: somewhere to report, the grid, the laws, the catalogue, and bodies read."""
 
-    grid: Grid | None
+    faults: list[Fault]
+    grid: Grid | None  # None after a fault in `time`
     laws: Mapping[str, Any]
+    catalogue: Mapping[str, Any]
 
     def fault(self, tree: Tree, message: str) -> None: ...
     def expected(self, tree: Tree, what: str, hint: str = "") -> Any: ...
-    def about(self, parameter: Parameter) -> Reading: ...
+    def about(self, parameter: Parameter | None) -> Reading: ...
     def body(self, tree: Tree) -> tuple[Entry, ...]: ...
 
 
 class Domain:
     """The set of values a parameter may take."""
 
-    structured = (
-        False  # whether a value is itself a mapping, so that `{value: v, per: day}` cannot stand for it
-    )
+    structured = False  # whether a value is itself a mapping, so that `{value: v, per: day}` cannot stand for it
 
     def describe(self) -> str:
         """Return the set in words that follow "expected", such as "a number above 0"."""
@@ -62,6 +62,10 @@ class Domain:
     def read(self, tree: Tree, reader: Reading) -> Any:
         """Return the value written at `tree`, or INVALID after reporting why it is not one."""
         raise NotImplementedError
+
+    def default(self, value: Any, reader: Reading) -> Any:
+        """Return the value that a declared default stands for."""
+        return value
 
 
 @dataclass(frozen=True)

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import hashlib
+import json
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Any
@@ -140,3 +142,40 @@ class Spec:
     correlation: Correlation
     raw: dict[str, Any] = field(compare=False)
     file: str | None = field(compare=False)
+
+    def changed(self, paths: int | None = None, steps: int | None = None, seed: int | None = None) -> Spec:
+        """Return this spec with another number of paths or steps, or another seed; SpecError when out of range."""
+        from procgen.spec.reader import change
+
+        asked = {"paths": paths, "steps": steps, "seed": seed}
+        return change(self, **{key: value for key, value in asked.items() if value is not None})
+
+    def canonical(self) -> dict[str, Any]:
+        """Return `raw` without what changes no value (title, notes, reuse), keys sorted, numbers normalised.
+
+        The order of series is kept: it is the order of the columns.
+        """
+        raw = {key: value for key, value in self.raw.items() if key not in ("title", "reuse")}
+        canonical = _normal(raw)
+        canonical["series"] = {name: _normal(_without_note(body)) for name, body in raw["series"].items()}
+        return canonical
+
+    def digest(self) -> str:
+        """Return the SHA-256 of the canonical spec, in hexadecimal."""
+        text = json.dumps(self.canonical(), ensure_ascii=False, separators=(",", ":"), allow_nan=False)
+        return hashlib.sha256(text.encode("utf-8")).hexdigest()
+
+
+def _without_note(body: Any) -> Any:
+    return {key: value for key, value in body.items() if key != "note"} if isinstance(body, dict) else body
+
+
+def _normal(value: Any) -> Any:
+    """Return plain data with sorted keys, and whole floats as the integers they equal."""
+    if isinstance(value, dict):
+        return {key: _normal(value[key]) for key in sorted(value)}
+    if isinstance(value, list):
+        return [_normal(item) for item in value]
+    if isinstance(value, float) and value.is_integer() and abs(value) < 2**53:
+        return int(value)
+    return value

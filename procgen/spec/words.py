@@ -10,15 +10,20 @@ def unknown_key(key: str, allowed: Iterable[str]) -> str:
     """Return the message for a key nobody declared, with the nearest valid one."""
     allowed = list(allowed)
     hint = did_you_mean(key, allowed)
-    return f"unknown key {key}; expected {one_of(allowed)}" + (f"; {hint}" if hint else "")
+    return f"unknown key {key[:40]}; expected {one_of(allowed)}" + (f"; {hint}" if hint else "")
 
 
 def did_you_mean(given: object, names: Iterable[str]) -> str:
     """Return "did you mean X?" for the nearest of `names`, or "" when none is near."""
+    near = nearest(given, names)
+    return f"did you mean {near}?" if near else ""
+
+
+def nearest(given: object, names: Iterable[str]) -> str | None:
+    """Return the nearest of `names` to a misspelt one, or None."""
     if not isinstance(given, str) or len(given) > 100:
-        return ""
-    near = difflib.get_close_matches(given, list(names), n=1, cutoff=0.6)
-    return f"did you mean {near[0]}?" if near else ""
+        return None
+    return next(iter(difflib.get_close_matches(given, list(names), n=1, cutoff=0.6)), None)
 
 
 def one_of(words: Iterable[str]) -> str:

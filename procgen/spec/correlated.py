@@ -1,0 +1,177 @@
+"""Reading `correlation`: pairs, matrices with names, groups of equal correlation; and whether they fit together."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+import numpy as np
+
+from procgen.spec.declare import INVALID, Domain, Parameter, Reading, Real, Reals, read_each
+from procgen.spec.links import Links
+from procgen.spec.model import Correlation
+from procgen.spec.tree import Tree
+from procgen.spec.words import did_you_mean, one_of
+
+MAX_NAMES = 1000
+SMALLEST = 1e-10  # below this a matrix is singular to rounding, and a draw would be a copy of others
+
+
+class Names(Domain):
+    """A list of addresses "series.label"; read as a tuple of trees, for the faults that come later."""
+
+    def __init__(self, exactly: int | None = None) -> None:
+        self.exactly = exactly
+
+    def describe(self) -> str:
+        count = "two" if self.exactly == 2 else "at least two"
+        return f"a list of {count} names such as load.arma"
+
+    def read(self, tree: Tree, reader: Reading) -> object:
+        sound = tree.is_list and all(isinstance(t.value, str) for t in tree.value)
+        if not sound or len(tree.value) < 2 or (self.exactly and len(tree.value) != self.exactly):
+            return reader.expected(tree, self.describe())
+        return tree.value
+
+
+class Matrix(Domain):
+    """A list of rows of numbers; read as a tuple of tuples of floats."""
+
+    def describe(self) -> str:
+        return "a list of rows of numbers, as in [[1, 0.3], [0.3, 1]]"
+
+    def read(self, tree: Tree, reader: Reading) -> object:
+        if not tree.is_list or not all(t.is_list for t in tree.value):
+            return reader.expected(tree, self.describe())
+        rows = tuple([Reals(at_least=-1.0, at_most=1.0).read(row, reader) for row in tree.value])
+        return INVALID if INVALID in rows else rows
+
+
+_VALUE = Parameter("value", "ρ", Real(above=-1.0, below=1.0), "correlation of the primary normals")
+FORMS = {
+    "between": (Parameter("between", "", Names(exactly=2), "the two that are correlated"), _VALUE),
+    "within": (Parameter("within", "", Names(), "names of which any two are correlated alike"), _VALUE),
+    "names": (
+        Parameter("names", "", Names(), "the rows and columns of the matrix"),
+        Parameter("matrix", "R", Matrix(), "correlations of the primary normals, with 1 on the diagonal"),
+    ),
+}
+
+
+def read_correlation(tree: Tree, links: Links, reader: Reading) -> Correlation:
+    """Return the correlation of all named sources, unnamed pairs 0; every fault is reported."""
+    pairs = _Pairs(links, reader)
+    items = tree.value if tree.is_list else (tree,)
+    before = len(reader.faults)
+    for item in items:
+        _read_item(item, pairs, reader)
+    if len(reader.faults) > before or not pairs.order:
+        return Correlation()
+    if len(pairs.order) > MAX_NAMES:
+        reader.fault(tree, f"expected at most {MAX_NAMES} correlated names, got {len(pairs.order):,}")
+        return Correlation()
+    matrix = pairs.matrix()
+    smallest = float(np.linalg.eigvalsh(matrix)[0])
+    if smallest < SMALLEST:
+        reader.fault(
+            tree,
+            f"expected a positive definite correlation, got one whose smallest eigenvalue is {smallest:.3g}; "
+            "bring the values nearer to 0, or to each other",
+        )
+        return Correlation()
+    return Correlation(tuple(pairs.order), tuple(tuple(map(float, row)) for row in matrix))
+
+
+class _Pairs:
+    """Correlations as they are met, by pair of names."""
+
+    def __init__(self, links: Links, reader: Reading) -> None:
+        self.links = links
+        self.reader = reader
+        self.order: dict[str, int] = {}
+        self.values: dict[tuple[int, int], float] = {}
+
+    def name(self, tree: Tree) -> int | None:
+        """Return the number of a name in order of first appearance, or None after a fault."""
+        name = tree.value
+        if name not in self.order:
+            if message := self._misnamed(name):
+                self.reader.fault(tree, message)
+                return None
+            self.order[name] = len(self.order)
+        return self.order[name]
+
+    def add(self, trees: Sequence[Tree], first: int | None, second: int | None, value: float) -> None:
+        """Keep one correlation; `trees` are its names as written."""
+        if first is None or second is None:
+            return
+        key = (min(first, second), max(first, second))
+        if first == second:
+            self.reader.fault(trees[1], f"expected two different names, got {trees[1].value} twice")
+        elif key in self.values:
+            message = f"the correlation of {trees[0].value} and {trees[1].value} is given twice; remove one"
+            self.reader.fault(trees[1], message)
+        else:
+            self.values[key] = value
+
+    def matrix(self) -> np.ndarray:
+        matrix = np.eye(len(self.order))
+        for (i, j), value in self.values.items():
+            matrix[i, j] = matrix[j, i] = value
+        return matrix
+
+    def _misnamed(self, name: str) -> str:
+        """Return why no primary draws go by a name, or ""."""
+        try:
+            target = self.links.find(name)
+        except LookupError as error:
+            return str(error)
+        sources = [f"{target.owner}.{label}" for label in self.links.sources(target.owner)]
+        if target.entry is not None and target.output is None and self.links.draws(target.entry):
+            return ""
+        if not sources:
+            return f"expected a term that draws shocks, got {name}; nothing in {target.owner} draws any"
+        return f"expected a term that draws shocks, got {name}; in {target.owner} that is {one_of(sources)}"
+
+
+def _read_item(tree: Tree, pairs: _Pairs, reader: Reading) -> None:
+    forms = [form for form in FORMS if tree.is_map and form in tree.value]
+    if len(forms) != 1:
+        hint = did_you_mean(next(iter(tree.value), None), FORMS) if tree.is_map else ""
+        reader.expected(
+            tree, "{between: [a.x, b.y], value: 0.3}, {within: […], value: 0.3} or {names: […], matrix: […]}", hint
+        )
+        return
+    values = read_each(tree, FORMS[forms[0]], reader)
+    names = values[forms[0]]
+    if names is INVALID:
+        return
+    places = [pairs.name(name) for name in names]
+    given = values.get("matrix", values.get("value"))
+    if given is INVALID:
+        return
+    if forms[0] == "names":
+        if not _proper(tree.value["matrix"], given, len(names), reader):
+            return
+    for i, first in enumerate(places):
+        for j in range(i + 1, len(places)):
+            value = given[i][j] if forms[0] == "names" else given
+            pairs.add((names[i], names[j]), first, places[j], value)
+
+
+def _proper(tree: Tree, rows: tuple[tuple[float, ...], ...], count: int, reader: Reading) -> bool:
+    """Return whether rows are a correlation matrix for `count` names, after reporting why not."""
+    widths = {len(row) for row in rows}
+    if len(rows) != count or widths != {count}:
+        given = f"{len(rows)} rows of {' or '.join(map(str, sorted(widths)))}"
+        reader.fault(tree, f"expected {count} rows of {count} for {count} names, got {given}")
+        return False
+    for i in range(count):
+        if rows[i][i] != 1.0:
+            reader.fault(tree.value[i], f"expected 1 on the diagonal, got {rows[i][i]:g} in row {i + 1}")
+            return False
+        for j in range(i):
+            if rows[i][j] != rows[j][i]:
+                given = f"{rows[i][j]:g} in row {i + 1}, column {j + 1} and {rows[j][i]:g} across it"
+                reader.fault(tree.value[i], f"expected a symmetric matrix, got {given}")
+                return False
+    return True

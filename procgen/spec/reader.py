@@ -1,0 +1,287 @@
+"""Reading a spec: text, file or plain data becomes a checked Spec, or a SpecError with every fault."""
+
+from __future__ import annotations
+
+import copy
+from collections.abc import Mapping
+from dataclasses import replace
+from pathlib import Path
+from typing import Any
+
+from procgen.spec.calendar import Grid
+from procgen.spec.correlated import read_correlation
+from procgen.spec.declare import INVALID, Body, Choice, Parameter, Text, Whole, read_each
+from procgen.spec.entries import SERIES_KEYS, read_body, read_name
+from procgen.spec.links import Links
+from procgen.spec.model import Correlation, Entry, Fault, Frozen, Place, Series, Shared, Spec, SpecError
+from procgen.spec.timegrid import MOST, read_time
+from procgen.spec.tree import TooMuch, Tree, from_data
+from procgen.spec.yaml12 import MAX_BYTES, from_text
+
+MAX_FAULTS = 200
+MAX_VALUES = 10**13  # 80 TB as float64
+RESERVED = ("path", "step", "time", "series", "weight")  # columns and words of the ensemble
+
+HEAD = (
+    Parameter("procgen", "", Whole(at_least=1, at_most=1), "version of the spec language", default=1),
+    Parameter("title", "", Text(), "free text, shown in reports", default=None),
+    Parameter("seed", "", Whole(at_least=0, at_most=2**128 - 1), "the number all draws follow from"),
+    Parameter("paths", "P", Whole(at_least=1, at_most=MOST), "number of paths"),
+)
+SECTIONS = ("time", "reuse", "shared", "series", "correlation")
+SERIES = (
+    Parameter("of", "", Body(), "the terms of the series"),
+    Parameter("unit", "", Text(), "unit of the values, kept in the metadata of the column", default=None),
+    Parameter("type", "", Choice("float64", "float32", "int64"), "type of the column", default="float64"),
+    Parameter("decimals", "", Whole(at_least=0, at_most=15), "decimals to round to", default=None),
+    Parameter("stream", "", Text(), "name its draws are found by; its own when absent", default=None),
+    Parameter("note", "", Text(), "free text", default=None),
+)
+
+
+class Reader:
+    """Collects faults while a tree is read; what `domains.Reading` asks for."""
+
+    def __init__(self, catalogue: Mapping[str, Any], laws: Mapping[str, Any]) -> None:
+        self.catalogue = catalogue
+        self.laws = laws
+        self.faults: list[Fault] = []
+        self.grid: Grid | None = None
+        self.subject: Parameter | None = None
+
+    def fault(self, tree: Tree, message: str) -> None:
+        """Report what is wrong at a tree; the same fault of an anchored text once."""
+        fault = Fault(tree.place, message)
+        here = (tree.place.line, tree.place.column, message)
+        if not tree.place.line or here not in {(f.place.line, f.place.column, f.message) for f in self.faults}:
+            self.faults.append(fault)
+        if len(self.faults) >= MAX_FAULTS:
+            raise TooMuch(f"more than {MAX_FAULTS} faults; these are the first", Place(tree.place.file, 0, 0, ""))
+
+    def expected(self, tree: Tree, what: str, hint: str = "") -> Any:
+        """Report that something else was expected at a tree, with the meaning of the parameter being read."""
+        subject = f" ({self.subject.name}: {self.subject.meaning})" if self.subject else ""
+        self.fault(tree, f"expected {what}, got {tree.show()}" + (f"; {hint}" if hint else "") + subject)
+        return INVALID
+
+    def about(self, parameter: Parameter | None) -> Reader:
+        """Return a reader that shares everything and speaks of `parameter`."""
+        other = copy.copy(self)
+        other.subject = parameter
+        return other
+
+    def body(self, tree: Tree) -> tuple[Entry, ...]:
+        return read_body(tree, self.about(None))
+
+
+def read_text(text: str, catalogue: Mapping[str, Any], laws: Mapping[str, Any], file: str | None = None) -> Spec:
+    """Return the Spec of a YAML text; SpecError lists every fault.
+
+    Parameters
+    ----------
+    text : the spec, strict YAML 1.2.
+    catalogue, laws : the kinds of term and the laws that a spec may name.
+    file : name for the places in faults.
+    """
+    faults: list[Fault] = []
+    return _read(from_text(text, file, faults), faults, catalogue, laws, file)
+
+
+def read_file(path: str | Path, catalogue: Mapping[str, Any], laws: Mapping[str, Any]) -> Spec:
+    """Return the Spec of a YAML file in UTF-8; SpecError when it cannot be read, or lists every fault."""
+    return read_text(_text_of(Path(path)), catalogue, laws, str(path))
+
+
+def read_raw(
+    data: Mapping[str, Any], catalogue: Mapping[str, Any], laws: Mapping[str, Any], file: str | None = None
+) -> Spec:
+    """Return the Spec of plain data in the spec language, such as `Spec.raw`; SpecError lists every fault."""
+    faults: list[Fault] = []
+    try:
+        tree = from_data(data, file, faults)
+    except TooMuch as refusal:
+        raise SpecError((*faults, refusal.fault)) from None
+    return _read(tree, faults, catalogue, laws, file)
+
+
+def _read(
+    tree: Tree | None,
+    faults: list[Fault],
+    catalogue: Mapping[str, Any],
+    laws: Mapping[str, Any],
+    file: str | None,
+) -> Spec:
+    reader = Reader(catalogue, laws)
+    reader.faults = faults
+    spec = None
+    try:
+        if tree is not None:
+            spec = _spec(tree, reader, file)
+    except TooMuch as refusal:
+        faults.append(refusal.fault)
+    if faults or spec is None:
+        raise _error(faults)
+    return spec
+
+
+def _error(faults: list[Fault]) -> SpecError:
+    """Return the error of all faults in order of their lines, those without a line last."""
+    faults = sorted(faults, key=lambda f: (f.place.line == 0, f.place.line, f.place.column))
+    return SpecError(tuple(faults[: MAX_FAULTS + 1]))
+
+
+def _spec(tree: Tree, reader: Reader, file: str | None) -> Spec | None:
+    if not tree.is_map:
+        reader.expected(tree, "a mapping with the keys procgen, seed, paths, time and series")
+        return None
+    head = read_each(tree, HEAD, reader, also=SECTIONS)
+    reader.grid = _grid(tree, reader)
+    shared = {name: _shared(name, t, reader) for name, t in _named(tree, "shared", reader).items()}
+    series = {name: _series(name, t, reader) for name, t in _named(tree, "series", reader).items()}
+    if not series:
+        _need(tree, "series", "a mapping of names to bodies, as in {load: [{white_noise: {sd: 1}}]}", reader)
+    _unique(tree, shared, series, reader)
+    links = Links({**shared, **series}, reader)
+    links.check()
+    correlation = Correlation()
+    if "correlation" in tree.value:
+        correlation = read_correlation(tree.value["correlation"], links, reader)
+    if reader.faults or reader.grid is None:
+        return None
+    check_size(tree, head["paths"], reader.grid.steps, len(series), reader)
+    return Spec(
+        head["title"],
+        head["seed"],
+        head["paths"],
+        reader.grid,
+        Frozen(shared),
+        Frozen(series),
+        correlation,
+        raw=tree.plain(),
+        file=file,
+    )
+
+
+def change(spec: Spec, **values: int) -> Spec:
+    """Return a spec with another number of `paths` or `steps`, or another `seed`; SpecError when out of range."""
+    time = {**spec.raw["time"], **{key: value for key, value in values.items() if key == "steps"}}
+    raw = {**spec.raw, **{key: value for key, value in values.items() if key != "steps"}, "time": time}
+    reader = Reader({}, {})
+    tree = from_data(raw, spec.file, reader.faults)
+    head = read_each(tree, HEAD, reader, also=SECTIONS)
+    grid = read_time(tree.value["time"], reader)
+    if not reader.faults and grid is not None:
+        check_size(tree, head["paths"], grid.steps, len(spec.series), reader)
+    if reader.faults or grid is None:
+        raise _error(reader.faults)
+    return replace(spec, seed=head["seed"], paths=head["paths"], time=grid, raw=tree.plain())
+
+
+def check_size(tree: Tree, paths: int, steps: int, series: int, reader: Reader) -> None:
+    """Report an ensemble that nobody can mean to draw."""
+    values = paths * steps * series
+    if values > MAX_VALUES:
+        size = f"{paths:,} paths × {steps:,} steps × {series:,} series = {values:.1e} values, {values * 8e-12:,.0f} TB"
+        reader.fault(tree.key("paths"), f"expected at most {MAX_VALUES:.0e} values, got {size}; ask for fewer")
+
+
+def _grid(tree: Tree, reader: Reader) -> Grid | None:
+    if "time" not in tree.value:
+        _need(tree, "time", "steps, and a start when there are dates, as in {steps: 100}", reader)
+        return None
+    return read_time(tree.value["time"], reader)
+
+
+def _need(tree: Tree, key: str, what: str, reader: Reader) -> None:
+    if key not in tree.value:
+        reader.fault(tree, f"expected the key {key} ({what})")
+
+
+def _named(tree: Tree, section: str, reader: Reader) -> dict[str, Tree]:
+    """Return the bodies of a section by name, the names checked."""
+    if section not in tree.value:
+        return {}
+    bodies = tree.value[section]
+    if not bodies.is_map or not bodies.value:
+        reader.expected(bodies, "a mapping of names to bodies, as in {load: [{white_noise: {sd: 1}}]}")
+        return {}
+    for name in bodies.value:
+        key = bodies.key(name)
+        if name in RESERVED:
+            reader.fault(key, f"the name {name} is reserved for a column of the ensemble; choose another")
+        else:
+            read_name(key, reader, name)
+    return dict(bodies.value)
+
+
+def _shared(name: str, tree: Tree, reader: Reader) -> Shared:
+    body = tree.value["of"] if tree.is_map and set(tree.value) == {"of"} else tree
+    return Shared(name, read_body(body, reader), tree.place)
+
+
+def _series(name: str, tree: Tree, reader: Reader) -> Series:
+    if not _has_attributes(tree, reader):
+        return Series(name, read_body(tree, reader), None, "float64", None, name, None, tree.place)
+    values = read_each(tree, SERIES, reader)
+    stream = read_name(tree.value["stream"], reader, name) if values["stream"] not in (None, INVALID) else name
+    if values["type"] == "int64" and values["decimals"]:
+        reader.fault(tree.key("decimals"), "an int64 has no decimals; remove decimals, or choose float64")
+    body = values["of"] if isinstance(values["of"], tuple) else ()
+    return Series(
+        name,
+        body,
+        values["unit"],
+        values["type"],
+        values["decimals"],
+        stream,
+        values["note"],
+        tree.place,
+    )
+
+
+def _has_attributes(tree: Tree, reader: Reader) -> bool:
+    """Return whether a series is written in its long form, {of: …, unit: …}."""
+    if not tree.is_map or any(key in reader.catalogue for key in tree.value):
+        return False
+    return any(key in SERIES_KEYS for key in tree.value)
+
+
+def _unique(tree: Tree, shared: dict[str, Shared], series: dict[str, Series], reader: Reader) -> None:
+    """Report names and streams that stand for two things."""
+    for name in series:
+        if name in shared:
+            reader.fault(tree.value["series"].key(name), f"the name {name} is a shared body already; rename one")
+    streams = {name: f"shared body {name}" for name in shared}
+    for name, one in series.items():
+        if one.stream in streams and name not in shared:
+            key = tree.value["series"].value[name].value["stream"] if one.stream != name else None
+            message = f"the stream {one.stream} belongs to the {streams[one.stream]}; two would draw the same values"
+            reader.fault(key or tree.value["series"].key(name), f"{message}; choose another")
+        streams.setdefault(one.stream, f"series {name}")
+
+
+def _text_of(path: Path) -> str:
+    """Return the text of a file, refusing what is too large or not UTF-8."""
+
+    def refuse(message: str) -> SpecError:
+        return SpecError((Fault(Place(str(path), 0, 0, ""), message),))
+
+    try:
+        if path.exists() and not path.is_file():
+            raise refuse("expected a file, got a folder or a device; give the path of a YAML file")
+        with open(path, "rb") as file:
+            data = file.read(MAX_BYTES + 1)
+    except (OSError, ValueError) as error:
+        why = error.strerror if isinstance(error, OSError) and error.strerror else str(error)
+        raise refuse(f"cannot read the spec: {why}; check the path") from None
+    if len(data) > MAX_BYTES:
+        raise refuse(f"expected a spec of at most {MAX_BYTES:,} bytes, got a larger file")
+    if data.startswith((b"\xff\xfe", b"\xfe\xff")):
+        raise refuse("expected UTF-8, got UTF-16; save the file as UTF-8")
+    try:
+        return data.decode("utf-8")
+    except UnicodeDecodeError as error:
+        line = data.count(b"\n", 0, error.start) + 1
+        column = error.start - data.rfind(b"\n", 0, error.start)
+        message = f"expected UTF-8, got the byte 0x{data[error.start]:02x}; save the file as UTF-8"
+        raise SpecError((Fault(Place(str(path), line, column, ""), message),)) from None
