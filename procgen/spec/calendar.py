@@ -241,7 +241,7 @@ def _family(unit: str) -> str:
 
 
 def _article(unit: str) -> str:
-    return f"an {unit}" if unit == "h" else f"a {unit}"
+    return {"ms": "a millisecond", "s": "a second", "min": "a minute", "h": "an hour"}.get(unit, f"a {unit}")
 
 
 def _microseconds(moment: datetime) -> int:
@@ -258,5 +258,5 @@ def _offsets(zone: str, days: list[int], clock: time, fold: int) -> np.ndarray:
     at, offset, clock = date.fromordinal, ZoneInfo(zone).utcoffset, clock.replace(fold=fold)
     # Few offsets occur in a zone, so each is divided out once: a million days take well under a second.
     found = [offset(datetime.combine(at(day), clock)) for day in days]
-    size = {value: value // MICROSECOND for value in set(found) if value is not None}
+    size = {value: 0 if value is None else value // MICROSECOND for value in set(found)}
     return np.array([size[value] for value in found], dtype=np.int64)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from typing import Any
 
 import numpy as np
 
@@ -11,6 +12,8 @@ from procgen.spec.links import Links
 from procgen.spec.model import Correlation
 from procgen.spec.tree import Tree
 from procgen.spec.words import did_you_mean, one_of
+
+Rows = tuple[tuple[float, ...], ...]
 
 MAX_NAMES = 1000
 SMALLEST = 1e-10  # below this a matrix is singular to rounding, and a draw would be a copy of others
@@ -146,19 +149,23 @@ def _read_item(tree: Tree, pairs: _Pairs, reader: Reading) -> None:
     if names is INVALID:
         return
     places = [pairs.name(name) for name in names]
-    given = values.get("matrix", values.get("value"))
-    if given is INVALID:
+    rows = _rows(tree, values, len(names), reader)
+    if rows is None:
         return
-    if forms[0] == "names":
-        if not _proper(tree.value["matrix"], given, len(names), reader):
-            return
     for i, first in enumerate(places):
         for j in range(i + 1, len(places)):
-            value = given[i][j] if forms[0] == "names" else given
-            pairs.add((names[i], names[j]), first, places[j], value)
+            pairs.add((names[i], names[j]), first, places[j], rows[i][j])
 
 
-def _proper(tree: Tree, rows: tuple[tuple[float, ...], ...], count: int, reader: Reading) -> bool:
+def _rows(tree: Tree, values: dict[str, Any], count: int, reader: Reading) -> Rows | None:
+    """Return the correlations of the names of an item as a matrix, or None after a fault."""
+    if "matrix" in values:
+        rows = values["matrix"]
+        return rows if rows is not INVALID and _proper(tree.value["matrix"], rows, count, reader) else None
+    return None if values["value"] is INVALID else ((values["value"],) * count,) * count
+
+
+def _proper(tree: Tree, rows: Rows, count: int, reader: Reading) -> bool:
     """Return whether rows are a correlation matrix for `count` names, after reporting why not."""
     widths = {len(row) for row in rows}
     if len(rows) != count or widths != {count}:

@@ -267,13 +267,13 @@ def _text_of(path: Path) -> str:
         return SpecError((Fault(Place(str(path), 0, 0, ""), message),))
 
     try:
-        if path.exists() and not path.is_file():
-            raise refuse("expected a file, got a folder or a device; give the path of a YAML file")
-        with open(path, "rb") as file:
-            data = file.read(MAX_BYTES + 1)
+        strange = path.exists() and not path.is_file()
+        data = b"" if strange else _bytes_of(path)
     except (OSError, ValueError) as error:
         why = error.strerror if isinstance(error, OSError) and error.strerror else str(error)
         raise refuse(f"cannot read the spec: {why}; check the path") from None
+    if strange:
+        raise refuse("expected a file, got a folder or a device; give the path of a YAML file")
     if len(data) > MAX_BYTES:
         raise refuse(f"expected a spec of at most {MAX_BYTES:,} bytes, got a larger file")
     if data.startswith((b"\xff\xfe", b"\xfe\xff")):
@@ -285,3 +285,8 @@ def _text_of(path: Path) -> str:
         column = error.start - data.rfind(b"\n", 0, error.start)
         message = f"expected UTF-8, got the byte 0x{data[error.start]:02x}; save the file as UTF-8"
         raise SpecError((Fault(Place(str(path), line, column, ""), message),)) from None
+
+
+def _bytes_of(path: Path) -> bytes:
+    with open(path, "rb") as file:
+        return file.read(MAX_BYTES + 1)

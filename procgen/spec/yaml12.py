@@ -20,7 +20,7 @@ from procgen.spec.words import did_you_mean
 
 MAX_BYTES = 1_000_000
 
-_WORDS = {"": None, "~": None}
+_WORDS: dict[str, bool | None] = {"": None, "~": None}
 _WORDS |= {word: None for word in ("null", "Null", "NULL")}
 _WORDS |= {word: True for word in ("true", "True", "TRUE")}
 _WORDS |= {word: False for word in ("false", "False", "FALSE")}
@@ -124,7 +124,7 @@ class _Composer:
             self.stack.pop().done = True
             self.pending.pop()
 
-    def _document(self, event: yaml.DocumentStartEvent) -> None:
+    def _document(self, event: Any) -> None:
         if self.root is not None:
             raise TooMuch("expected one document; remove the line --- and what follows it", self._place(event))
         if event.version not in (None, (1, 2)):
@@ -139,7 +139,7 @@ class _Composer:
             self.anchors[event.anchor] = node
         return node
 
-    def _alias(self, event: yaml.AliasEvent) -> _Node:
+    def _alias(self, event: Any) -> _Node:
         node = self.anchors.get(event.anchor)
         if node is None:
             hint = did_you_mean(event.anchor, self.anchors)
@@ -162,7 +162,7 @@ class _Composer:
             parent.value.append((self.pending[-1], node))
             self.pending[-1] = None
 
-    def _place(self, event: yaml.Event) -> Place:
+    def _place(self, event: Any) -> Place:
         return Place(self.file, event.start_mark.line + 1, event.start_mark.column + 1, "")
 
 
@@ -210,6 +210,8 @@ class _Planter:
         place = Place(self.file, key.line, key.column, path)
         if key.plain and key.value == "<<":
             self._fault(place, "merge keys (<<) are not part of YAML 1.2; write the keys out, or use one alias")
+        elif key.tag is not None:
+            self._fault(place, f"tags such as {key.tag[:40]} are not allowed; remove it, or quote a text")
         elif not isinstance(key.value, str):
             self._fault(place, f"expected a key that is a text, got {Tree(_outline(key), place).show()}")
         elif hidden := hidden_in(key.value):
