@@ -1,0 +1,226 @@
+"""What a term writes its moments on: constructors of expressions over one set of sources."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass, field
+from typing import Any
+
+import numpy as np
+
+from procgen.theory import known
+from procgen.theory.expression import Expression, opaque, product
+from procgen.theory.garch import Garch
+from procgen.theory.known import Known
+from procgen.theory.linear import At, Base, Linear
+from procgen.theory.sources import GARCH, IID, SQUARES, Source, Space
+from procgen.theory.unknown import Unknown
+
+
+@dataclass
+class Axis:
+    """The steps of a spec and its sources.
+
+    Parameters
+    ----------
+    horizon : number of steps of the spec; shapes of known functions are recognised over it
+    correlation : correlations of primary normals, keyed by frozensets of two source keys
+    """
+
+    horizon: int = 4096
+    correlation: Mapping[frozenset[str], float] = field(default_factory=dict)
+    period: float | None = None  # of the term at work, if it has one
+    space: Space = field(init=False)
+    _bases: dict[tuple, Base] = field(default_factory=dict)
+
+    def __post_init__(self) -> None:
+        self.space = Space(self.correlation, self.horizon)
+
+    @property
+    def name(self) -> str:
+        """The term at work, as reasons name it."""
+        return self.space.name
+
+    def at_work(self, name: str, period: float | None = None) -> None:
+        """Say which term writes its moments next."""
+        self.space.name, self.period = name, period
+
+    def known(self, f: Callable[[np.ndarray], np.ndarray], constant: bool = False) -> Expression:
+        """A deterministic series: f of int64 steps (negative ones too) gives float64 values of the same shape."""
+        if constant:
+            return Expression(self.space, known.constant(float(f(np.zeros(1, np.int64))[0])))
+        key = ("known", self.name, id(f), len(self._bases))
+        return Expression(self.space, known.observed(key, f, self.horizon, self.name, self.period))
+
+    def source(self, key: str, law: Any, sd: float) -> Expression:
+        """Independent shocks of a law, standard deviation `sd`, at the address `key`."""
+        return self._noise(self.space.add(Source(key, IID, float(sd) ** 2, law)))
+
+    def garch(
+        self,
+        key: str,
+        law: Any,
+        omega: float,
+        alpha: Sequence[float],
+        beta: Sequence[float] = (),
+        before_variance: Sequence[float] | None = None,
+        before_shocks: Sequence[float] | None = None,
+    ) -> Expression:
+        """White shocks with conditional variance; the `before` ones are oldest first, without shocks e^2 is h."""
+        squares: tuple[float, ...] = ()
+        if before_variance is not None:
+            squares = tuple(e * e for e in before_shocks or ()) or tuple(before_variance)
+        process = Garch(
+            law, float(omega), tuple(alpha), tuple(beta),
+            tuple(before_variance) if before_variance is not None else None, squares,
+        )  # fmt: skip
+        path = process.variance_path if process.started else None
+        source = self.space.add(Source(key, GARCH, process.variance, law, path, detail=process))
+        noise = self._noise(source, started=process.started)
+        return Expression(
+            self.space, self._past(before_shocks), noise.linear, outputs={"variance": lambda: self._variance(source)}
+        )
+
+    def filtered(
+        self,
+        noise: Expression,
+        phi: Sequence[float],
+        theta: Sequence[float] = (),
+        before_x: Sequence[float] | None = None,
+        before_shocks: Sequence[float] | None = None,
+    ) -> Expression:
+        """x(t) = sum phi_i x(t-i) + a(t) + sum theta_j a(t-j) of a noise a, stationary unless a past is given.
+
+        The past is oldest first; values and shocks before step 0 that are not given count as not defined.
+        """
+        phi, theta = _trimmed(phi), _trimmed(theta)
+        started = before_x is not None
+        total: dict[At, float] = {}
+        for key, c in noise.linear.items():
+            if not isinstance(key, At) or noise.terms:
+                return self._given_up(noise, "a filter of a noise that is itself a running sum or a product")
+            if started and (key.delay or key.base.phi):
+                return self._given_up(noise, "a filter that starts from a given past, of a noise with a memory")
+            if key.base.started and not started:
+                return self._given_up(noise, "a stationary filter of a noise that starts from a given past")
+            base = self._base(key.base.source, _times(key.base.phi, phi), started)
+            for j, weight in enumerate((1.0, *theta)):
+                at = At(base, key.delay + j)
+                total[at] = total.get(at, 0.0) + c * weight
+        try:
+            mean = self._filtered_mean(noise.mean_path, phi, theta, before_x, before_shocks)
+        except Unknown as unknown:
+            return self._given_up(noise, unknown.reason)
+        if started:
+            self.space.origins.update({at.base: self.name for at in total})
+        return Expression(self.space, mean, Linear(total), outputs=noise.outputs)
+
+    def walk(self, noise: Expression, drift: float, start: float) -> Expression:
+        """x(0) = start, x(t) = x(t-1) + drift + a(t), followed backwards below step 0."""
+        drifting = Expression(self.space, known.constant(float(drift))) + noise
+        walk = drifting.integrate(float(start))
+        return Expression(self.space, walk.mean_path, walk.linear, walk.terms, noise.outputs)
+
+    def product(self, expressions: Sequence[Expression]) -> Expression:
+        """The product of series."""
+        return product(self.space, expressions)
+
+    def opaque(
+        self,
+        ingredients: Sequence[Expression],
+        reason: str,
+        mean: Callable[[np.ndarray], np.ndarray] | None = None,
+    ) -> Expression:
+        """A series made of others in a way that has no closed moments, with the reason, and its mean if known."""
+        path = None if mean is None else known.observed(("mean", self.name, id(mean)), mean, self.horizon, self.name)
+        return opaque(self.space, ingredients, reason, path)
+
+    def _noise(self, source: Source, started: bool = False) -> Expression:
+        return Expression(self.space, known.constant(0.0), Linear({At(self._base(source, (), started), 0): 1.0}))
+
+    def _base(self, source: Source, phi: tuple[float, ...], started: bool) -> Base:
+        key = (source.key, phi, started)
+        return self._bases.setdefault(key, Base(source, phi, started))
+
+    def _given_up(self, noise: Expression, reason: str) -> Expression:
+        return opaque(self.space, (noise,), f"{self.name}: {reason}")
+
+    def _past(self, values: Sequence[float] | None) -> Known:
+        """0 from step 0 on, the given values (oldest first) before it, not defined further back."""
+        if values is None:
+            return known.constant(0.0)
+        past = np.array([np.nan, *values, 0.0])
+        return known.whole(
+            ("past", self.name, tuple(values)),
+            lambda steps: past[np.clip(np.asarray(steps) + len(past) - 1, 0, len(past) - 1)],
+            note=f"the given past of {self.name}",
+        )
+
+    def _variance(self, source: Source) -> Expression:
+        process: Garch = source.detail
+        if process.started:
+            ingredient = Expression(self.space, known.constant(0.0), Linear({At(Base(source, (), True), 0): 1.0}))
+            return opaque(
+                self.space, (ingredient,), f"the variance of {source.key}, which leaves from a given one",
+                known.whole(("variance", source.key), process.variance_path, note=f"variance of {source.key}"),
+            )  # fmt: skip
+        squares = squares_of(self.space, source)
+        base = self._base(squares, process.persistence, False)
+        form = Linear({At(base, delay): c for delay, c in process.variance_weights.items()})
+        return Expression(self.space, known.constant(process.variance), form)
+
+    def _filtered_mean(self, mean: Known, phi, theta, before_x, before_shocks) -> Known:
+        if before_x is None:
+            if mean.value is None:
+                raise Unknown("a filter of a noise whose mean moves")
+            return known.constant(mean.value * (1.0 + sum(theta)) / (1.0 - sum(phi)) if mean.value else 0.0)
+        if mean.level or mean.slope or any(piece.key[0] != "past" for piece in mean.pieces):
+            raise Unknown("a filter that starts from a given past, of a noise with a mean")
+        return _forecast(self.name, phi, theta, tuple(before_x), tuple(before_shocks or ()))
+
+
+def squares_of(space: Space, source: Source) -> Source:
+    """The white source v = e^2 - h behind the squares of a garch; one object each."""
+    key = f"{source.key} squared"
+    if key not in space.sources:
+        space.add(Source(key, SQUARES, source.detail.shock_variance, owner=source, detail=source.detail))
+    return space.sources[key]
+
+
+def _trimmed(coefficients: Sequence[float]) -> tuple[float, ...]:
+    values = [float(c) for c in coefficients]
+    while values and values[-1] == 0.0:
+        values.pop()
+    return tuple(values)
+
+
+def _times(one: tuple[float, ...], other: tuple[float, ...]) -> tuple[float, ...]:
+    if not one or not other:
+        return one or other
+    whole = np.convolve([1.0, *(-c for c in one)], [1.0, *(-c for c in other)])
+    return tuple((-whole[1:]).tolist())
+
+
+def _forecast(name: str, phi, theta, before_x, before_shocks) -> Known:
+    """The path that the recursion takes from a given past when no more shocks come."""
+    from procgen.theory.arma import PowerSeries
+
+    p, q = len(phi), len(theta)
+    if len(before_x) < p or len(before_shocks) < q:
+        raise Unknown("a given past that is shorter than the recursion needs")
+    # Shocks and values before step 0 reach it as a numerator of order max(p, q) - 1, over phi(B).
+    reaching = np.zeros(max(p, q, 1))
+    for weights, past in ((phi, before_x), (theta, before_shocks)):
+        for i, weight in enumerate(weights, start=1):
+            for t in range(i):
+                reaching[t] += weight * past[t - i]
+    ahead, past = PowerSeries(reaching, phi), np.array([np.nan, *before_x])
+
+    def at(steps: np.ndarray) -> np.ndarray:
+        steps = np.asarray(steps, np.int64)
+        before = past[np.clip(steps + len(past), 0, len(past) - 1)]
+        return np.where(steps < 0, before, ahead.at(np.maximum(steps, 0)))
+
+    if not np.any(reaching) and not np.any(before_x):
+        return known.constant(0.0)
+    return known.whole(("forecast", name, phi, theta, before_x, before_shocks), at, note=f"the given past of {name}")

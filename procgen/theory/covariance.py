@@ -1,0 +1,84 @@
+"""Covariance of two linear forms at any pairs of steps."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from procgen.theory.arma import cross_covariance
+from procgen.theory.linear import At, Base, Linear, base_of
+from procgen.theory.sources import Space
+from procgen.theory.system import system_of
+
+
+def covariance(space: Space, x: Linear, y: Linear, t: np.ndarray, s: np.ndarray) -> np.ndarray:
+    """Cov(x(t), y(s)) for int64 arrays of steps of one shape.
+
+    Independent groups of sources are added up. A group without running sums and given pasts needs only
+    autocovariances at lags; the others go through a small joint state space. Raises Unknown with the reason.
+    """
+    total = np.zeros(t.shape)
+    shared = space.components(x.sources | y.sources)
+    for group in shared:
+        left, right = x.only(group), y.only(group)
+        if not left or not right:
+            continue
+        if left.is_plain and right.is_plain:
+            total += _plain(space, left, right, t, s)
+        else:
+            system = system_of(space, (left,) if left == right else (left, right))
+            flat = system.covariance(0, len(system.observation) - 1, t.ravel(), s.ravel())
+            total += flat.reshape(t.shape)
+    return total
+
+
+def condition(form: Linear) -> float:
+    """The largest condition number met in the autocovariances of the bases of a form (1 for plain noise)."""
+    phis = {base_of(key).phi for key in form if not base_of(key).started}
+    return max((cross_covariance(phi, phi).condition for phi in phis), default=1.0)
+
+
+def _plain(space: Space, x: Linear, y: Linear, t: np.ndarray, s: np.ndarray) -> np.ndarray:
+    total = np.zeros(t.shape)
+    for a, (delays_a, frozen_a) in _by_base(x).items():
+        for b, (delays_b, frozen_b) in _by_base(y).items():
+            scale = space.covariance(a.source, b.source)
+            if scale == 0.0:
+                continue
+            gamma = cross_covariance(a.phi, b.phi)
+            for shift, weight in _shifts(delays_a, delays_b).items():
+                total += (scale * weight) * gamma(t - s + shift)
+            for back, weight in frozen_b.items():
+                for delay, c in delays_a.items():
+                    total += (scale * weight * c) * gamma(t - delay + back)
+            for back, weight in frozen_a.items():
+                for delay, c in delays_b.items():
+                    total += (scale * weight * c) * gamma(delay - s - back)
+                for other, c in frozen_b.items():
+                    total += scale * weight * c * float(gamma(np.array(other - back)))
+    return total
+
+
+def _shifts(a: dict[int, float], b: dict[int, float]) -> dict[int, float]:
+    """Weights of Gamma(h + shift) in the covariance of two sums of delays: a correlation of the coefficients."""
+    if len(a) == 1 and len(b) == 1:
+        ((d, c),), ((e, k),) = a.items(), b.items()
+        return {e - d: c * k}
+    low_a, low_b = min(a), min(b)
+    first, second = np.zeros(max(a) - low_a + 1), np.zeros(max(b) - low_b + 1)
+    first[np.array(list(a)) - low_a] = list(a.values())
+    second[np.array(list(b)) - low_b] = list(b.values())
+    weights = np.convolve(second, first[::-1])  # index k is the shift k - (len(first) - 1) + low_b - low_a
+    offset = low_b - low_a - (len(first) - 1)
+    return {int(k) + offset: float(weights[k]) for k in np.nonzero(weights)[0]}
+
+
+def _by_base(form: Linear) -> dict[Base, tuple[dict[int, float], dict[int, float]]]:
+    """For each base, the coefficients by delay and by frozen lag."""
+    parts: dict[Base, tuple[dict[int, float], dict[int, float]]] = {}
+    for key, c in form.items():
+        delays, frozen = parts.setdefault(key.base, ({}, {}))
+        if isinstance(key, At):
+            delays[key.delay] = c
+        else:
+            frozen[key.back] = c
+    return parts

@@ -1,0 +1,274 @@
+"""Random series as polynomials of linear forms and their exponentials, with known coefficients.
+
+An expression is a known mean, one linear form, and a sum of *terms*: number x known factors x linear forms x
+exp(linear form), or the running sum of such a term. Sums, products, delays and running sums stay in this shape;
+what does not (an exponential of something that is not linear, a product with a running sum of products) becomes an
+opaque source, whose moments are unknown for a reason, but whose stationarity is not.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterable, Mapping, Sequence
+from dataclasses import dataclass, field, replace
+from itertools import count
+
+import numpy as np
+
+from procgen.theory import known, wick
+from procgen.theory.known import Known
+from procgen.theory.linear import At, Base, Linear, Sum
+from procgen.theory.sources import OPAQUE, Source, Space
+from procgen.theory.unknown import Unknown
+
+MOST_TERMS = 512
+LARGEST_TABLE = 2048  # running sums of non-linear terms are added up exactly, to this step
+_serial = count()
+
+
+@dataclass(frozen=True)
+class Term:
+    """Known factors times linear forms times exp(exponent); or known factors times a running sum of a term."""
+
+    knowns: tuple[Known, ...] = ()
+    factors: tuple[Linear, ...] = ()
+    exponent: Linear = field(default_factory=Linear)
+    summed: Term | None = None
+
+    @property
+    def sources(self) -> dict[Source, None]:
+        inner = self.summed.sources if self.summed else {}
+        for form in (*self.factors, self.exponent):
+            inner = inner | form.sources
+        return inner
+
+    def coefficient(self, steps: np.ndarray) -> np.ndarray:
+        value = np.ones(np.shape(steps))
+        for factor in self.knowns:
+            value = value * factor(steps)
+        return value
+
+    def lag(self, by: int) -> Iterable[tuple[Term, float]]:
+        """This term `by` steps ago, as a sum of terms: a running sum gives back what it has summed since."""
+        knowns = tuple(k.lag(by) for k in self.knowns)
+        if self.summed is None:
+            yield Term(knowns, tuple(f.lag(by) for f in self.factors), self.exponent.lag(by)), 1.0
+            return
+        yield Term(knowns, summed=self.summed), 1.0
+        for j in range(by):
+            for inner, c in self.summed.lag(j):
+                yield replace(inner, knowns=_sorted(knowns + inner.knowns)), -c
+
+
+@dataclass(frozen=True)
+class Expression:
+    """A random series: `mean` + `linear` + sum of `terms` with their numbers.
+
+    `hidden` gives the hidden outputs that the last term offers, by name.
+    """
+
+    space: Space
+    mean_path: Known
+    linear: Linear = field(default_factory=Linear)
+    terms: Mapping[Term, float] = field(default_factory=dict)
+    outputs: Mapping[str, Callable[[], Expression]] = field(default_factory=dict)
+
+    # algebra
+
+    def __add__(self, other: Expression) -> Expression:
+        terms = _collect([*self.terms.items(), *other.terms.items()])
+        if len(terms) > MOST_TERMS:
+            return opaque(self.space, (self, other), f"a sum of more than {MOST_TERMS} products")
+        return Expression(self.space, self.mean_path + other.mean_path, self.linear + other.linear, terms)
+
+    def __mul__(self, factor: float) -> Expression:
+        return Expression(
+            self.space,
+            self.mean_path.scaled(factor),
+            self.linear.scaled(factor),
+            {term: factor * c for term, c in self.terms.items()} if factor else {},
+            self.outputs,
+        )
+
+    __rmul__ = __mul__
+
+    def lag(self, by: int) -> Expression:
+        """The series `by` steps ago."""
+        terms = [(t, c * k) for term, c in self.terms.items() for t, k in term.lag(by)]
+        return Expression(self.space, self.mean_path.lag(by), self.linear.lag(by), _collect(terms))
+
+    def difference(self, lag: int = 1, order: int = 1) -> Expression:
+        """(1 - B^lag)^order of the series."""
+        out = self
+        for _ in range(order):
+            out = out + out.lag(lag) * -1.0
+        return out
+
+    def integrate(self, start: float = 0.0) -> Expression:
+        """y(0) = start, y(t) = y(t-1) + x(t), followed backwards below 0."""
+        terms = [(Term(summed=term), c) for term, c in self.terms.items()]
+        linear, name = self.linear.integrate(), self.space.name
+        for key in linear:
+            if isinstance(key, Sum):
+                self.space.origins.setdefault(key, name)
+        return Expression(self.space, self.mean_path.integrate(start, name), linear, _collect(terms))
+
+    def exp(self) -> Expression:
+        """The exponential of the series; opaque unless the series is linear."""
+        if self.terms:
+            return opaque(self.space, (self,), "an exponential of what is not linear has no closed moments")
+        level = self.mean_path.exp()
+        if not self.linear:
+            return Expression(self.space, level)
+        if level.value is not None:
+            return Expression(self.space, known.constant(0.0), terms={Term(exponent=self.linear): level.value})
+        return Expression(self.space, known.constant(0.0), terms={Term((level,), exponent=self.linear): 1.0})
+
+    def hidden(self, name: str) -> Expression:
+        """A hidden output of the term, such as the variance of a garch."""
+        if name in self.outputs:
+            return self.outputs[name]()
+        return opaque(self.space, (self,), f"the hidden output {name!r} has no closed moments")
+
+    # moments
+
+    @property
+    def parts(self) -> list[tuple[Term, float]]:
+        """All random parts as terms, the linear form first."""
+        first = [(Term(factors=(self.linear,)), 1.0)] if self.linear else []
+        return first + list(self.terms.items())
+
+    def mean(self, steps: np.ndarray) -> np.ndarray:
+        """E x at int64 steps."""
+        steps = np.asarray(steps, np.int64)
+        for source in self.linear.sources:
+            if source.kind == OPAQUE and not source.centred:
+                raise Unknown(source.reason)
+        total = self.mean_path(steps)
+        for term, c in self.terms.items():
+            total = total + c * _mean(self.space, term, steps)
+        return total
+
+    def covariance(self, other: Expression, t: np.ndarray, s: np.ndarray) -> np.ndarray:
+        """Cov(x(t), y(s)) for int64 steps of one shape."""
+        total = np.zeros(t.shape)
+        for m, c in self.parts:
+            for n, k in other.parts:
+                total = total + (c * k) * _covariance(self.space, m, n, t, s)
+        return total
+
+    @property
+    def sources(self) -> dict[Source, None]:
+        found = dict(self.linear.sources)
+        for term in self.terms:
+            found |= term.sources
+        return found
+
+
+def product(space: Space, expressions: Sequence[Expression]) -> Expression:
+    """The product of series, expanded into terms."""
+    whole: list[tuple[Term, float]] = [(Term(), 1.0)]
+    for expression in expressions:
+        parts = list(expression.parts)
+        level = expression.mean_path
+        if level.value is None:
+            parts.append((Term((level,)), 1.0))
+        elif level.value:
+            parts.append((Term(), level.value))
+        if len(parts) * len(whole) > MOST_TERMS:
+            return opaque(space, expressions, f"a product that expands to more than {MOST_TERMS} parts")
+        try:
+            whole = [(_times(a, b), c * k) for a, c in whole for b, k in parts]
+        except Unknown as unknown:
+            return opaque(space, expressions, unknown.reason)
+    return _sorted_out(space, whole)
+
+
+def opaque(space: Space, ingredients: Sequence[Expression], reason: str, mean: Known | None = None) -> Expression:
+    """A series whose covariances are unknown for a reason; its mean too unless it is given."""
+    behind = {source for x in ingredients for source in x.sources}
+    roots = frozenset(r for s in behind for r in (s.depends if s.kind == OPAQUE else (s.owner or s,)))
+    source = Source(
+        f"opaque {next(_serial)}", OPAQUE, np.nan, detail=tuple(ingredients), depends=roots, reason=reason,
+        centred=mean is not None,
+    )  # fmt: skip
+    return Expression(space, mean or known.constant(0.0), Linear({At(Base(source), 0): 1.0}))
+
+
+def _times(a: Term, b: Term) -> Term:
+    knowns = _sorted(a.knowns + b.knowns)
+    if a.summed or b.summed:
+        one, other = (a, b) if a.summed else (b, a)
+        if other.summed or other.factors or other.exponent:
+            raise Unknown("a running sum of products, multiplied again, has no closed moments")
+        return Term(knowns, summed=one.summed)
+    return Term(knowns, tuple(sorted(a.factors + b.factors, key=hash)), a.exponent + b.exponent)
+
+
+def _sorted_out(space: Space, parts: Iterable[tuple[Term, float]]) -> Expression:
+    """Parts back to their places: what is known to the mean, what is linear to the form."""
+    mean, linear, rest = known.constant(0.0), Linear(), []
+    for term, c in parts:
+        if term.summed or term.exponent or len(term.factors) > 1 or (term.factors and term.knowns):
+            rest.append((term, c))
+        elif term.factors:
+            linear = linear + term.factors[0].scaled(c)
+        else:
+            level = known.constant(c)
+            for factor in term.knowns:
+                level = level * factor
+            mean = mean + level
+    return Expression(space, mean, linear, _collect(rest))
+
+
+def _collect(parts: Iterable[tuple[Term, float]]) -> dict[Term, float]:
+    total: dict[Term, float] = {}
+    for term, c in parts:
+        total[term] = total.get(term, 0.0) + c
+    return {term: c for term, c in total.items() if c}
+
+
+def _sorted(knowns: tuple[Known, ...]) -> tuple[Known, ...]:
+    return tuple(sorted(knowns, key=lambda k: repr(k.key)))
+
+
+# moments of terms
+
+
+def _mean(space: Space, term: Term, steps: np.ndarray) -> np.ndarray:
+    if term.summed is None:
+        return term.coefficient(steps) * wick.mean(space, term.factors, term.exponent, steps)
+    top = _table_size(steps)
+    inner = _mean(space, term.summed, np.arange(top, dtype=np.int64))
+    inner[0] = 0.0
+    return term.coefficient(steps) * np.cumsum(inner)[steps]
+
+
+def _covariance(space: Space, m: Term, n: Term, t: np.ndarray, s: np.ndarray) -> np.ndarray:
+    if not any(space.dependent(a, b) for a in m.sources for b in n.sources):
+        return np.zeros(t.shape)
+    known_part = m.coefficient(t) * n.coefficient(s)
+    if m.summed is None and n.summed is None:
+        return known_part * wick.joint(space, (m.factors, m.exponent), (n.factors, n.exponent), t, s)[1]
+    return known_part * _table(space, m, n, _table_size(t), _table_size(s))[t, s]
+
+
+def _table(space: Space, m: Term, n: Term, rows: int, columns: int) -> np.ndarray:
+    """Covariances of two terms without their known factors at all pairs of steps, running sums added up."""
+    for axis, term in ((0, m), (1, n)):
+        if term.summed is not None:
+            a, b = (term.summed, n) if axis == 0 else (m, term.summed)
+            t, s = np.arange(rows), np.arange(columns)
+            inner = _table(space, a, b, rows, columns)
+            inner = inner * (a.coefficient(t)[:, None] if axis == 0 else b.coefficient(s)[None, :])
+            inner[(0, slice(None)) if axis == 0 else (slice(None), 0)] = 0.0
+            return np.cumsum(inner, axis=axis)
+    t, s = np.meshgrid(np.arange(rows), np.arange(columns), indexing="ij")
+    return wick.joint(space, (m.factors, m.exponent), (n.factors, n.exponent), t, s)[1]
+
+
+def _table_size(steps: np.ndarray) -> int:
+    if np.min(steps, initial=0) < 0:
+        raise Unknown("a running sum of products is added up from step 0 on only")
+    if np.max(steps, initial=0) >= LARGEST_TABLE:
+        raise Unknown(f"a running sum of products is added up exactly, which is done before step {LARGEST_TABLE}")
+    return int(np.max(steps, initial=0)) + 1

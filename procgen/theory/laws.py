@@ -1,0 +1,117 @@
+"""Laws at one step: whether a series is Gaussian, its marginal law, and how many moments it has."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+
+from procgen.theory.covariance import covariance
+from procgen.theory.expression import Expression, Term
+from procgen.theory.linear import At
+from procgen.theory.sources import GARCH, IID, OPAQUE, SQUARES, Source, Space
+from procgen.theory.unknown import Unknown
+
+
+def is_gaussian(x: Expression) -> bool:
+    """Whether the values at any steps are jointly Gaussian (a known series counts as such)."""
+    linear = all(len(t.factors) == 1 and not t.exponent and t.summed is None for t in x.terms)
+    return linear and all(source.gaussian for source in x.sources)
+
+
+def marginal(x: Expression, step: int) -> Any:
+    """The law of x at a step, with pdf, cdf, sf, ppf, mean and var."""
+    at = np.array([step], np.int64)
+    from scipy import stats
+
+    if is_gaussian(x):
+        variance = float(x.covariance(x, at, at)[0])
+        if variance <= 0.0:
+            raise Unknown("the value at that step is known, not random")
+        return stats.norm(float(x.mean(at)[0]), float(np.sqrt(variance)))
+    if not x.linear and len(x.terms) == 1:
+        (term, c), level = next(iter(x.terms.items())), float(x.mean_path(at)[0])
+        return _lognormal(x.space, term, c * float(term.coefficient(at)[0]), level, at)
+    if not x.terms and len(x.linear) == 1:
+        (key, c), level = next(iter(x.linear.items())), float(x.mean(at)[0])
+        source = key.base.source if isinstance(key, At) and not key.base.phi else None
+        if source is not None and source.kind == IID:
+            return Affine(source.law.distribution(), level, c * float(np.sqrt(source.variance)))
+    raise Unknown(f"a combination of shocks that are not normal ({_names(x)}) has no closed law")
+
+
+def highest_moment(x: Expression) -> float:
+    """The order below which absolute moments are known to exist."""
+    orders = [np.inf]
+    for term, _ in x.parts:
+        orders += _orders(x.space, term)
+    return float(min(orders))
+
+
+class Affine:
+    """The law of location + scale z, for a standardised law of z and a scale that may be negative."""
+
+    def __init__(self, law: Any, location: float, scale: float):
+        self.law, self.location, self.scale = law, location, scale
+
+    def _z(self, x):
+        return (np.asarray(x, float) - self.location) / self.scale
+
+    def pdf(self, x):
+        return self.law.pdf(self._z(x)) / abs(self.scale)
+
+    def cdf(self, x):
+        return self.law.cdf(self._z(x)) if self.scale > 0 else self.law.sf(self._z(x))
+
+    def sf(self, x):
+        return self.law.sf(self._z(x)) if self.scale > 0 else self.law.cdf(self._z(x))
+
+    def ppf(self, p):
+        p = np.asarray(p, float)
+        return self.location + self.scale * (self.law.ppf(p) if self.scale > 0 else self.law.ppf(1.0 - p))
+
+    def mean(self) -> float:
+        return self.location + self.scale * float(self.law.mean())
+
+    def var(self) -> float:
+        return self.scale**2 * float(self.law.var())
+
+    def std(self) -> float:
+        return float(np.sqrt(self.var()))
+
+
+def _lognormal(space: Space, term: Term, scale: float, level: float, at: np.ndarray) -> Any:
+    from scipy import stats
+
+    if term.factors or term.summed or not all(source.gaussian for source in term.sources):
+        raise Unknown("a product, or an exponential of what is not Gaussian, has no closed law")
+    variance = float(covariance(space, term.exponent, term.exponent, at, at)[0])
+    if variance <= 0.0:
+        raise Unknown("the value at that step is known, not random")
+    law = stats.lognorm(np.sqrt(variance), scale=abs(scale))
+    return stats.lognorm(np.sqrt(variance), loc=level, scale=scale) if scale > 0 else Affine(law, level, -1.0)
+
+
+def _orders(space: Space, term: Term) -> list[float]:
+    if term.summed is not None:
+        return _orders(space, term.summed)
+    if any(not source.gaussian for source in term.exponent.sources):
+        raise Unknown("an exponential of what is not Gaussian may have no moments")
+    orders = []
+    for group in space.components(term.sources):
+        degree = sum(bool(form.only(group)) for form in term.factors)
+        orders += [_order(source) / max(degree, 1) for source in group]  # Hoelder, for dependent factors
+    return orders
+
+
+def _order(source: Source) -> float:
+    if source.kind == OPAQUE:
+        raise Unknown(source.reason)
+    if source.kind in (GARCH, SQUARES):
+        order = source.detail.highest_moment
+        return order if source.kind == GARCH else order / 2.0
+    return float(source.law.highest_moment)
+
+
+def _names(x: Expression) -> str:
+    return ", ".join(source.owner.key if source.owner else source.key for source in x.sources if not source.gaussian)

@@ -1,0 +1,323 @@
+"""The theory of a spec: what its series must look like, as numbers or as reasons why there are none."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass, field
+from functools import cached_property
+from typing import Any
+
+import numpy as np
+
+from procgen.theory import fourth, laws
+from procgen.theory.axis import Axis
+from procgen.theory.covariance import condition
+from procgen.theory.expression import Expression, opaque
+from procgen.theory.sources import GARCH, Source, pairs
+from procgen.theory.system import System, system_of
+from procgen.theory.unknown import Unknown
+from procgen.theory.verdict import Stationarity, judge
+
+WORTH_SAYING = 1e-9 / (100 * np.finfo(float).eps)  # a condition number above this weakens the promised 1e-9
+
+
+class SeriesTheory:
+    """Exact moments of one series. Every unknown number is None, and `reason(name)` says why.
+
+    Steps and lags are int64 arrays of any shape, steps from 0 on; answers have the shape asked for.
+    """
+
+    def __init__(self, name: str, expression: Expression):
+        self.name = name
+        self.expression = expression
+        self._reasons: dict[str, str] = {}
+
+    def mean(self, steps) -> np.ndarray | None:
+        """E x at steps."""
+        return self._try("mean", lambda: self.expression.mean(_steps(steps)))
+
+    def variance(self, steps) -> np.ndarray | None:
+        """Var x at steps."""
+        return self._try("variance", lambda: np.maximum(_cov(self.expression, self.expression, steps, steps), 0.0))
+
+    def covariance(self, t, s) -> np.ndarray | None:
+        """Cov(x(t), x(s)); t and s broadcast against each other."""
+        return self._try("covariance", lambda: _cov(self.expression, self.expression, t, s))
+
+    def autocovariance(self, lags, from_step: int = 0) -> np.ndarray | None:
+        """Cov(x(from_step + lag), x(from_step)) at lags >= 0."""
+        later = _steps(lags) + from_step
+        return self._try("autocovariance", lambda: _cov(self.expression, self.expression, later, from_step))
+
+    def autocorrelation(self, lags, from_step: int = 0) -> np.ndarray | None:
+        """The same, divided by the standard deviations of both steps; None where one of them is 0."""
+
+        def correlation() -> np.ndarray:
+            later = _steps(lags) + from_step
+            x = self.expression
+            spread = _cov(x, x, later, later) * float(_cov(x, x, from_step, from_step))
+            if np.any(spread <= 0.0):
+                raise Unknown("the variance is 0 at a step that is asked for")
+            return _cov(x, x, later, from_step) / np.sqrt(spread)
+
+        return self._try("autocorrelation", correlation)
+
+    @cached_property
+    def stationarity(self) -> Stationarity:
+        """Verdict and reasons; unpacks as (verdict, reasons)."""
+        return judge(self.expression)
+
+    @cached_property
+    def gaussian(self) -> bool:
+        """Whether the series at any steps is jointly Gaussian."""
+        return laws.is_gaussian(self.expression)
+
+    def marginal(self, step: int) -> Any | None:
+        """The law at one step as a frozen SciPy distribution."""
+        return self._try("marginal", lambda: laws.marginal(self.expression, int(step)))
+
+    @property
+    def excess_kurtosis(self) -> float | None:
+        """Excess kurtosis, the same at every step; `excess_kurtosis_at` where it changes."""
+        return self._try("excess_kurtosis", lambda: fourth.steady_excess_kurtosis(self.expression, self.stationarity))
+
+    def excess_kurtosis_at(self, step: int) -> float | None:
+        """Excess kurtosis at one step."""
+        return self._try("excess_kurtosis_at", lambda: fourth.excess_kurtosis(self.expression, int(step)))
+
+    def autocovariance_of_squares(self, lags, from_step: int = 0) -> np.ndarray | None:
+        """Cov((x - E x)^2 at from_step + lag, the same at from_step) at lags >= 0."""
+        later = _steps(lags) + from_step
+        return self._try(
+            "autocovariance_of_squares",
+            lambda: fourth.autocovariance_of_squares(self.expression, later, np.full(later.shape, from_step)),
+        )
+
+    @cached_property
+    def highest_moment(self) -> float | None:
+        """The order below which absolute moments are known to exist (inf: all do); a lower bound where not exact."""
+        return self._try("highest_moment", lambda: laws.highest_moment(self.expression))
+
+    def system(self) -> System | None:
+        """The state space of a linear series: s(t) = A s(t-1) + B e(t), x(t) = mean(t) + C s(t)."""
+
+        def build() -> System:
+            if self.expression.terms:
+                raise Unknown("the series is not linear with constant coefficients")
+            return system_of(self.expression.space, (self.expression.linear,))
+
+        return self._try("system", build)
+
+    @property
+    def condition(self) -> float:
+        """Condition number behind the autocovariances: relative errors are about 1e-16 times it."""
+        forms = [f for term, _ in self.expression.parts for f in (*term.factors, term.exponent)]
+        return max((condition(form) for form in forms), default=1.0)
+
+    def reason(self, name: str) -> str | None:
+        """Why the last answer of that name was None; None when it was not."""
+        return self._reasons.get(name)
+
+    def as_dict(self, at: Sequence[int], lags: int | Sequence[int] = 40) -> dict[str, Any]:
+        """Plain numbers for JSON: moments at the steps `at`, and autocovariances from the first of them on.
+
+        A stationary series is looked at from step 0. Unknown numbers are None, with their reasons beside them.
+        """
+        steps = np.asarray(at, np.int64)
+        span = np.arange(lags + 1) if isinstance(lags, int) else np.asarray(lags, np.int64)
+        first = 0 if self.stationarity.covariance_stationary or not len(steps) else int(steps[0])
+        out: dict[str, Any] = {
+            "stationarity": {"verdict": self.stationarity.verdict, "reasons": list(self.stationarity.reasons)},
+            "gaussian": self.gaussian,
+            "steps": steps.tolist(),
+            "mean": _plain(self.mean(steps)),
+            "variance": _plain(self.variance(steps)),
+            "autocovariance": {
+                "from_step": first,
+                "lags": span.tolist(),
+                "values": _plain(self.autocovariance(span, first)),
+            },
+            "autocorrelation": _plain(self.autocorrelation(span, first)),
+            "excess_kurtosis": self.excess_kurtosis,
+        }
+        asked = ("mean", "variance", "autocovariance", "autocorrelation", "excess_kurtosis")
+        reasons = {name: self._reasons[name] for name in asked if name in self._reasons}
+        if reasons:
+            out["unknown"] = reasons
+        if self.condition > WORTH_SAYING:
+            out["condition"] = self.condition
+        return out
+
+    def _try(self, name: str, answer: Callable[[], Any]) -> Any:
+        try:
+            value = answer()
+        except Unknown as unknown:
+            self._reasons[name] = unknown.reason
+            return None
+        self._reasons.pop(name, None)
+        return value
+
+
+class CrossTheory:
+    """Exact covariances between two series."""
+
+    def __init__(self, first: SeriesTheory, second: SeriesTheory):
+        self.first, self.second = first, second
+        self._reason: str | None = None
+
+    def covariance(self, t, s) -> np.ndarray | None:
+        """Cov(first(t), second(s)); t and s broadcast against each other; None with `reason` where unknown."""
+        try:
+            self._reason = None
+            return _cov(self.first.expression, self.second.expression, t, s)
+        except Unknown as unknown:
+            self._reason = unknown.reason
+            return None
+
+    def correlation(self, t, s) -> np.ndarray | None:
+        """The same, divided by both standard deviations."""
+        value = self.covariance(t, s)
+        if value is None:
+            return None
+        a, b = self.first.variance(t), self.second.variance(s)
+        if a is None or b is None or np.any(np.asarray(a) * np.asarray(b) <= 0.0):
+            self._reason = self.first.reason("variance") or self.second.reason("variance") or "a variance is 0"
+            return None
+        return value / np.sqrt(a * b)
+
+    def reason(self, name: str = "covariance") -> str | None:
+        """Why the last answer was None."""
+        del name
+        return self._reason
+
+
+@dataclass(frozen=True)
+class Correlated:
+    """One correlated pair: of its primary normals, and of its values where that is exact (else None and why)."""
+
+    leader: str
+    follower: str
+    normals: float
+    values: float | None
+    tolerance: float | None = None
+    reason: str | None = None
+
+
+@dataclass
+class Theory(Mapping[str, SeriesTheory]):
+    """The theory of every series of a spec, and of their pairs."""
+
+    series: dict[str, SeriesTheory]
+    names: tuple[str, ...] = ()  # of `correlation`, the leader first
+    axis: Axis = field(default_factory=Axis)
+
+    def __getitem__(self, name: str) -> SeriesTheory:
+        if name not in self.series:
+            raise KeyError(f"expected one of the series {', '.join(self.series)}, got {name!r}")
+        return self.series[name]
+
+    def __iter__(self):
+        return iter(self.series)
+
+    def __len__(self) -> int:
+        return len(self.series)
+
+    def cross(self, first: str, second: str) -> CrossTheory:
+        """Covariances between two series."""
+        return CrossTheory(self[first], self[second])
+
+    @cached_property
+    def correlated(self) -> tuple[Correlated, ...]:
+        """Every correlated pair of terms, the one that leads (first in `correlation`) first."""
+        sources = [self.axis.space.sources[name] for name in self.names if name in self.axis.space.sources]
+        return tuple(self._correlated(a, b) for a, b in pairs(sources) if self.axis.space.dependent(a, b))
+
+    def _correlated(self, a: Source, b: Source) -> Correlated:
+        normals = self.axis.space.normal_correlation(a, b)
+        if GARCH in (a.kind, b.kind):
+            try:
+                self.axis.space.covariance(a, b)
+            except Unknown as unknown:
+                return Correlated(a.key, b.key, normals, None, reason=unknown.reason)
+        value, tolerance = self.axis.space.law_correlation(a, b)
+        return Correlated(a.key, b.key, normals, value, tolerance)
+
+    def as_dict(self, at: Sequence[int], lags: int | Sequence[int] = 40) -> dict[str, Any]:
+        """What `procgen theory --json` prints."""
+        series = {name: theory.as_dict(at, lags) for name, theory in self.series.items()}
+        cross = [entry for a, b in pairs(self.series) if (entry := self._cross_entry(a, b, at))]
+        correlation = [
+            {"leader": c.leader, "follower": c.follower, "normals": c.normals, "values": c.values}
+            | ({"tolerance": c.tolerance} if c.reason is None else {"reason": c.reason})
+            for c in self.correlated
+        ]
+        return {"series": series, "cross": cross, "correlation": correlation}
+
+    def _cross_entry(self, a: str, b: str, at: Sequence[int]) -> dict[str, Any] | None:
+        space, steps = self.axis.space, np.asarray(at, np.int64)
+        left, right = (self.series[name].expression.sources for name in (a, b))
+        if not any(space.dependent(x, y) for x in left for y in right):
+            return None
+        cross = self.cross(a, b)
+        covariance = _plain(cross.covariance(steps, steps))
+        entry = {"series": [a, b], "steps": steps.tolist(), "covariance": covariance}
+        if covariance is None:
+            return entry | {"reason": cross.reason()}
+        return entry | {"correlation": _plain(cross.correlation(steps, steps))}
+
+
+def theory(spec: Any, graph: Any = None) -> Theory:
+    """The exact theory of a checked spec.
+
+    Parameters
+    ----------
+    spec : Spec
+    graph : the graph of its terms; built when not given
+
+    Each term writes its moments on one axis; a term without closed moments counts as unknown, with the reason.
+    """
+    if graph is None:
+        from procgen.terms.graph import build
+
+        graph = build(spec)
+    names, matrix = spec.correlation.names, spec.correlation.matrix
+    correlation = {
+        frozenset((names[i], names[j])): float(matrix[i][j])
+        for i in range(len(names))
+        for j in range(i)
+        if matrix[i][j]
+    }
+    axis = Axis(spec.time.steps, correlation)
+    memo: dict[int, Expression] = {}
+    series = {name: SeriesTheory(name, _moments(axis, graph.series[name], memo)) for name in spec.series}
+    return Theory(series, tuple(names), axis)
+
+
+def _moments(axis: Axis, node: Any, memo: dict[int, Expression]) -> Any:
+    if not hasattr(node, "term"):
+        return None  # a primary stream: the term that draws from it writes the source
+    if id(node) not in memo:
+        inputs = [x for part in node.inputs if (x := _moments(axis, part, memo)) is not None]
+        axis.at_work(node.name, node.term.values.get("period"))
+        try:
+            memo[id(node)] = node.term.moments(axis, *inputs)
+        except (Unknown, NotImplementedError) as unknown:
+            reason = str(unknown) or f"{node.term.kind} gives no closed moments"
+            memo[id(node)] = opaque(axis.space, inputs, f"{node.name}: {reason}")
+    return memo[id(node)]
+
+
+def _steps(steps) -> np.ndarray:
+    steps = np.asarray(steps)
+    if steps.size and (steps.dtype.kind not in "iu" or steps.min() < 0):
+        raise ValueError(f"expected whole steps from 0 on, got {steps.ravel()[:5].tolist()}")
+    return steps.astype(np.int64)
+
+
+def _cov(x: Expression, y: Expression, t, s) -> np.ndarray:
+    t, s = (steps.copy() for steps in np.broadcast_arrays(_steps(t), _steps(s)))
+    return x.covariance(y, t, s)
+
+
+def _plain(values: np.ndarray | None) -> list | None:
+    return None if values is None else [v if np.isfinite(v) else None for v in np.asarray(values, float).tolist()]

@@ -1,0 +1,131 @@
+"""The sources of randomness, and what is known of two of them at the same step.
+
+Distinct steps of distinct sources are uncorrelated for every kind: independent shocks, conditionally heteroskedastic
+shocks (whose sign is new at each step), and the martingale differences e^2 - h behind squares.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterable, Mapping
+from dataclasses import dataclass, field
+from itertools import combinations
+from typing import Any
+
+import numpy as np
+
+from procgen.theory.copula import law_correlation
+from procgen.theory.unknown import Unknown
+
+IID, GARCH, SQUARES, OPAQUE = "independent", "garch", "squares", "opaque"
+
+
+@dataclass(frozen=True, eq=False)
+class Source:
+    """White noise at an address; one object each.
+
+    `variance` is inf where there is none. `path` gives the variance at steps >= 0 for a source that leaves from a
+    given past. An opaque source stands for what has no closed form: `depends` are the sources behind it.
+    """
+
+    key: str
+    kind: str
+    variance: float
+    law: Any = None
+    path: Callable[[np.ndarray], np.ndarray] | None = None
+    owner: Source | None = None  # the garch whose squares a SQUARES source drives
+    detail: Any = None  # the Garch behind a garch or squares source; the ingredients of an opaque one
+    depends: frozenset[Source] = frozenset()
+    reason: str = ""
+    centred: bool = True  # False for an opaque source whose mean is not known either
+
+    @property
+    def gaussian(self) -> bool:
+        return self.kind == IID and bool(self.law.gaussian)
+
+    @property
+    def symmetric(self) -> bool:
+        """Whether flipping all signs leaves its law as it is."""
+        return self.kind in (IID, GARCH) and self.law.skewness == 0.0
+
+
+@dataclass
+class Space:
+    """All sources of a spec, their correlations, and what was found to be dependent."""
+
+    correlations: Mapping[frozenset[str], float] = field(default_factory=dict)
+    horizon: int = 4096  # the steps over which the shape of a known function counts
+    name: str = "the series"  # the term that is at work, for reasons
+    sources: dict[str, Source] = field(default_factory=dict)
+    origins: dict[Any, str] = field(default_factory=dict)  # where a running sum was written, by its key
+
+    def add(self, source: Source) -> Source:
+        if source.key in self.sources:
+            raise ValueError(f"expected one source an address, got {source.key!r} twice; give one a name with `as:`")
+        self.sources[source.key] = source
+        return source
+
+    def normal_correlation(self, a: Source, b: Source) -> float:
+        """Correlation of the primary normals behind two sources."""
+        a, b = a.owner or a, b.owner or b
+        return self.correlations.get(frozenset((a.key, b.key)), 0.0) if a is not b else 1.0
+
+    def dependent(self, a: Source, b: Source) -> bool:
+        if a is b:
+            return True
+        left, right = _roots(a), _roots(b)
+        return any(self.normal_correlation(x, y) != 0.0 for x in left for y in right)
+
+    def components(self, sources: Iterable[Source]) -> list[list[Source]]:
+        """Sources grouped so that distinct groups are independent, in order of first appearance."""
+        groups: list[list[Source]] = []
+        for source in sources:
+            linked = [g for g in groups if any(self.dependent(source, other) for other in g)]
+            merged = [s for g in linked for s in g] + [source]
+            groups = [g for g in groups if g not in linked] + [merged]
+        return groups
+
+    def covariance(self, a: Source, b: Source) -> float:
+        """E a(t) b(t) for sources with constant variance; Unknown, with the reason, where it has no closed form."""
+        if a is b:
+            if a.kind == OPAQUE:
+                raise Unknown(a.reason)
+            if not np.isfinite(a.variance):
+                raise Unknown(f"infinite variance of {_named(a)}")
+            return a.variance
+        if not self.dependent(a, b):
+            return 0.0
+        for one in (a, b):
+            if one.kind == OPAQUE:
+                raise Unknown(one.reason)
+        if SQUARES in (a.kind, b.kind):
+            return self._with_squares(a, b)
+        if GARCH in (a.kind, b.kind):
+            raise Unknown(
+                f"{a.key} and {b.key} are correlated and conditionally heteroskedastic: their covariance is "
+                "the correlation times the mean product of their conditional standard deviations, which is not known"
+            )
+        return float(np.sqrt(a.variance * b.variance)) * self.law_correlation(a, b)[0]
+
+    def law_correlation(self, a: Source, b: Source) -> tuple[float, float]:
+        """Correlation of the values of two independent-in-time sources, and a bound on its numerical error."""
+        return law_correlation(a.law, b.law, self.normal_correlation(a, b))
+
+    def _with_squares(self, a: Source, b: Source) -> float:
+        if a.kind == b.kind == SQUARES:
+            raise Unknown(f"squares of the correlated {a.owner.key} and {b.owner.key} have no closed covariance")
+        squares, other = (a, b) if a.kind == SQUARES else (b, a)
+        if squares.owner.symmetric and other.symmetric:
+            return 0.0  # flipping every sign leaves the squares and turns the other one round
+        raise Unknown(f"{squares.owner.key} is skewed: its squares and {other.key} have no closed covariance")
+
+
+def _roots(source: Source) -> Iterable[Source]:
+    return source.depends if source.kind == OPAQUE else (source.owner or source,)
+
+
+def _named(source: Source) -> str:
+    return source.owner.key + " squared" if source.owner else source.key
+
+
+def pairs(sources: Iterable[Source]) -> Iterable[tuple[Source, Source]]:
+    return combinations(sources, 2)

@@ -1,0 +1,245 @@
+"""State spaces: covariances of what has no stationary law, exact at any step.
+
+    s(t) = A s(t-1) + B e(t),   y(t) = C s(t),   P(0) = Cov s(0)
+
+Its state holds the lags of each base, each running sum, and each value of step 0 that is remembered. Variances at a
+few steps come from doubling A and the sum of A^j Q A'^j (Smith 1968, SIAM J. Appl. Math. 16, 198-201), so that
+step 1e9 costs thirty products; at many steps from the responses C A^j B, added up as squares.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from procgen.theory.arma import companion, cross_covariance
+from procgen.theory.linear import At, Base, Frozen, Key, Linear, Sum, base_of
+from procgen.theory.sources import Source, Space
+from procgen.theory.unknown import Unknown
+
+LARGEST_STATE = 1500
+MANY = 128  # from so many distinct steps on, responses are cheaper than doubling
+LONGEST_RESPONSE = 50_000_000  # numbers in a table of responses
+SETTLED = 1e-15  # relative distance from its limit at which a variance path counts as constant
+
+
+@dataclass
+class System:
+    """A linear state space; `sources` name the columns of B and the rows of `noise` (their covariance).
+
+    `noise_path` gives the source variances at given steps, (steps, sources), where they still change.
+    """
+
+    transition: np.ndarray
+    loading: np.ndarray
+    observation: np.ndarray
+    initial: np.ndarray
+    noise: np.ndarray
+    sources: tuple[str, ...]
+    noise_path: Callable[[np.ndarray], np.ndarray] | None = None
+    _table: list[tuple[np.ndarray, np.ndarray]] = field(default_factory=list, repr=False)
+
+    def covariance(self, i: int, j: int, t: np.ndarray, s: np.ndarray) -> np.ndarray:
+        """Cov(y_i(t), y_j(s)) for one-dimensional int64 arrays of steps >= 0."""
+        early = np.minimum(t, s)
+        out = np.empty(t.shape)
+        for ahead, (late, row), (_, other) in ((True, (t, i), (s, j)), (False, (s, j), (t, i))):
+            chosen = (t >= s) if ahead else (t < s)
+            if chosen.any():
+                out[chosen] = self._ordered(row, other, early[chosen], (late - early)[chosen])
+        return out
+
+    def _ordered(self, late: int, early: int, steps: np.ndarray, gaps: np.ndarray) -> np.ndarray:
+        """Cov(y_late(step + gap), y_early(step))."""
+        distinct = np.unique(steps)
+        longest = int(steps.max() + gaps.max()) + 1
+        affordable = longest * len(self.transition) <= LONGEST_RESPONSE
+        few_gaps = len(np.unique(gaps)) <= len(distinct)
+        if self.noise_path is None and len(distinct) > MANY and few_gaps and affordable:
+            return self._by_responses(late, early, steps, gaps)
+        return self._by_marching(late, early, steps, gaps)
+
+    def _by_marching(self, late: int, early: int, steps: np.ndarray, gaps: np.ndarray) -> np.ndarray:
+        rows, where = self._rows(self.observation[late], gaps)
+        distinct, at = np.unique(steps, return_inverse=True)
+        seen = np.empty((len(distinct), len(self.initial)))
+        now, p = 0, self.initial
+        for k, step in enumerate(distinct.tolist()):
+            p = self._advance(p, now, step)
+            seen[k], now = p @ self.observation[early], step
+        return np.einsum("pi,pi->p", rows[where], seen[at])
+
+    def _advance(self, p: np.ndarray, now: int, step: int) -> np.ndarray:
+        while self.noise_path is not None and now < step:
+            now += 1
+            variances = self.noise_path(np.array([now]))[0]
+            if np.abs(variances - np.diag(self.noise)).max() <= SETTLED * np.diag(self.noise).max():
+                now -= 1
+                break
+            if now > LONGEST_RESPONSE // 100:
+                raise Unknown("the variance of a source has not settled after half a million steps")
+            q = self.noise.copy()
+            np.fill_diagonal(q, variances)
+            p = self.transition @ p @ self.transition.T + self.loading @ q @ self.loading.T
+        gap, k = step - now, 0
+        while gap:
+            if gap & 1:
+                power, gathered = self._doubled(k)
+                p = power @ p @ power.T + gathered
+            gap, k = gap >> 1, k + 1
+        return p
+
+    def _doubled(self, k: int) -> tuple[np.ndarray, np.ndarray]:
+        """A^n and the sum of A^j Q A'^j over j < n, for n = 2^k."""
+        if not self._table:
+            self._table.append((self.transition, self.loading @ self.noise @ self.loading.T))
+        with np.errstate(under="ignore", over="ignore", invalid="ignore"):
+            while len(self._table) <= k:
+                power, gathered = self._table[-1]
+                self._table.append((power @ power, gathered + power @ gathered @ power.T))
+        return self._table[k]
+
+    def _rows(self, row: np.ndarray, gaps: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """row A^gap for the distinct gaps, and which of them each gap is."""
+        distinct, where = np.unique(gaps, return_inverse=True)
+        if len(distinct) > MANY and (distinct[-1] + 1) * len(row) <= LONGEST_RESPONSE:
+            return self._responses(row, int(distinct[-1]) + 1)[distinct], where
+        rows, now = np.empty((len(distinct), len(row))), 0
+        for k, gap in enumerate(distinct.tolist()):
+            left, bit, now = gap - now, 0, gap
+            while left:
+                if left & 1:
+                    row = row @ self._doubled(bit)[0]
+                left, bit = left >> 1, bit + 1
+            rows[k] = row
+        return rows, where
+
+    def _responses(self, row: np.ndarray, count: int) -> np.ndarray:
+        """row A^j for j < count, twice as many at a time."""
+        rows, k = row[None, :], 0
+        while len(rows) < count:
+            rows = np.concatenate([rows, rows[: count - len(rows)] @ self._doubled(k)[0]])
+            k += 1
+        return rows
+
+    def _by_responses(self, late: int, early: int, steps: np.ndarray, gaps: np.ndarray) -> np.ndarray:
+        last = int(steps.max()) + 1
+        ahead = self._responses(self.observation[late], last + int(gaps.max()))
+        behind = self._responses(self.observation[early], last)
+        psi_ahead, psi_behind = ahead @ self.loading @ self.noise, behind @ self.loading
+        kept = ahead @ self.initial
+        out = np.empty(steps.shape)
+        for gap in np.unique(gaps).tolist():
+            chosen = gaps == gap
+            products = np.einsum("tm,tm->t", psi_ahead[gap : gap + last], psi_behind)
+            gathered = np.concatenate([[0.0], np.cumsum(products)])[steps[chosen]]
+            start = np.einsum("ti,ti->t", kept[gap + steps[chosen]], behind[steps[chosen]])
+            out[chosen] = gathered + start
+        return out
+
+
+def system_of(space: Space, forms: Sequence[Linear]) -> System:
+    """The joint state space of linear forms, one row of the observation each.
+
+    Raises Unknown where a covariance of the sources is not known, or the state would be too large.
+    """
+    layout = _Layout(forms)
+    n = layout.size
+    if n > LARGEST_STATE:
+        raise Unknown(f"its state has {n} elements, and covariances of such series are computed up to {LARGEST_STATE}")
+    sources = list(dict.fromkeys(base.source for base in layout.depth))
+    noise = np.array([[space.covariance(a, b) for b in sources] for a in sources])
+    transition, loading = np.zeros((n, n)), np.zeros((n, len(sources)))
+    for base, depth in layout.depth.items():
+        at = layout.place[At(base, 0)]
+        transition[at : at + depth, at : at + depth] = companion(base.phi, depth)
+        loading[at, sources.index(base.source)] = 1.0
+    for key in layout.kept:
+        at = layout.place[key]
+        transition[at, at] = 1.0
+        if isinstance(key, Sum):  # its last value, plus what is summed at this step
+            inner = layout.place[key.of]
+            transition[at] += transition[inner]
+            loading[at] += loading[inner]
+    observation = np.zeros((len(forms), n))
+    for row, form in zip(observation, forms, strict=True):
+        for key, c in form.items():
+            row[layout.index(key)] += c
+    initial = _initial(space, layout, sources)
+    return System(transition, loading, observation, initial, noise, tuple(s.key for s in sources), _noise_path(sources))
+
+
+class _Layout:
+    """Where each key stands in the state: the lags of each base, then frozen values and sums, inner ones first."""
+
+    def __init__(self, forms: Sequence[Linear]):
+        self.depth: dict[Base, int] = {}
+        kept: dict[Key, None] = {}
+        for key in (key for form in forms for key in form):
+            base = base_of(key)
+            self.depth[base] = max(self.depth.get(base, 1), len(base.phi), _reach(key))
+            chain = [key]
+            while isinstance(chain[-1], Sum):
+                chain.append(chain[-1].of)
+            kept |= dict.fromkeys(k for k in reversed(chain) if not isinstance(k, At))
+        self.kept = list(kept)
+        self.place: dict[Key, int] = {}
+        self.size = 0
+        for base, depth in self.depth.items():
+            self.place[At(base, 0)] = self.size
+            self.size += depth
+        for key in self.kept:
+            self.place[key] = self.size
+            self.size += 1
+
+    def index(self, key: Key) -> int:
+        return self.place[At(key.base, 0)] + key.delay if isinstance(key, At) else self.place[key]
+
+
+def _reach(key: Key) -> int:
+    while isinstance(key, Sum):
+        key = key.of
+    return (key.delay if isinstance(key, At) else key.back) + 1
+
+
+def _initial(space: Space, layout: _Layout, sources: list[Source]) -> np.ndarray:
+    """Cov s(0): bases in their stationary law or from nothing, frozen values as copies of them, sums at 0."""
+    bases = list(layout.depth)
+    lags = np.zeros((layout.size, layout.size))
+    for i, a in enumerate(bases):
+        for b in bases[: i + 1]:
+            block = _lag_block(space, a, layout.depth[a], b, layout.depth[b])
+            p, q = layout.place[At(a, 0)], layout.place[At(b, 0)]
+            lags[p : p + len(block), q : q + block.shape[1]] = block
+            lags[q : q + block.shape[1], p : p + len(block)] = block.T
+    copy = np.eye(layout.size)
+    for key in layout.kept:
+        copy[layout.place[key]] = 0.0
+        if isinstance(key, Frozen):
+            copy[layout.place[key], layout.place[At(key.base, 0)] + key.back] = 1.0
+    return copy @ lags @ copy.T
+
+
+def _lag_block(space: Space, a: Base, rows: int, b: Base, columns: int) -> np.ndarray:
+    """E w_a(-i) w_b(-j) for i < rows, j < columns."""
+    block = np.zeros((rows, columns))
+    scale = space.covariance(a.source, b.source)
+    if not a.started and not b.started:
+        lags = np.arange(columns)[None, :] - np.arange(rows)[:, None]
+        return scale * cross_covariance(a.phi, b.phi)(lags) if scale else block
+    path = a.source.path if a.source is b.source else None
+    block[0, 0] = scale if path is None else float(path(np.zeros(1, np.int64))[0])
+    return block
+
+
+def _noise_path(sources: list[Source]) -> Callable[[np.ndarray], np.ndarray] | None:
+    if all(source.path is None for source in sources):
+        return None
+
+    def path(steps: np.ndarray) -> np.ndarray:
+        flat = np.ones(steps.shape)
+        return np.stack([s.variance * flat if s.path is None else s.path(steps) for s in sources], axis=1)
+
+    return path

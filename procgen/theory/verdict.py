@@ -1,0 +1,188 @@
+"""Whether a series is stationary, and why not.
+
+Weak stationarity speaks of mean and autocovariances, strict stationarity of all laws; a conditionally
+heteroskedastic series can be both. A verdict is the first that applies of
+
+    infinite variance, variance grows, variance not constant, settles from its given start,
+    mean not constant, cyclostationary, weakly stationary, strictly stationary
+
+and its reasons name every term that contributes.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from procgen.theory.arma import spectral_radius
+from procgen.theory.expression import Expression, Term
+from procgen.theory.known import Known
+from procgen.theory.linear import Frozen, Key, Linear, Sum, base_of
+from procgen.theory.sources import GARCH, OPAQUE, SQUARES, Source, Space
+
+INFINITE = "infinite variance"
+GROWS = "variance grows"
+VARIES = "variance not constant"
+SETTLES = "settles from its given start"
+MEAN = "mean not constant"
+CYCLES = "cyclostationary"
+WEAK = "weakly stationary"
+STRICT = "strictly stationary"
+ORDER = (INFINITE, GROWS, VARIES, SETTLES, MEAN, CYCLES, WEAK, STRICT)
+UNIT_ROOT = 1e-9  # a root nearer to the unit circle than this counts as on it
+
+
+@dataclass(frozen=True)
+class Stationarity:
+    """A verdict and its reasons.
+
+    `stationary`: mean and autocovariances do not depend on the step. `covariance_stationary`: the
+    autocovariances do not, so that deviations from the (known) mean may be pooled over time.
+    """
+
+    verdict: str
+    reasons: tuple[str, ...]
+    stationary: bool
+    covariance_stationary: bool
+
+    def __iter__(self):
+        return iter((self.verdict, self.reasons))
+
+
+@dataclass
+class _Findings:
+    space: Space
+    found: dict[str, list[str]] = field(default_factory=dict)
+    notes: list[str] = field(default_factory=list)
+
+    def say(self, verdict: str, reason: str) -> None:
+        reasons = self.found.setdefault(verdict, [])
+        if reason not in reasons:
+            reasons.append(reason)
+
+
+def judge(x: Expression) -> Stationarity:
+    """The verdict on a series, from what it is made of."""
+    findings = _Findings(x.space)
+    _random_parts(findings, x)
+    _mean(findings, x.mean_path)
+    found = findings.found
+    verdict = next((v for v in ORDER if v in found), STRICT)
+    reasons = [reason for v in ORDER for reason in found.get(v, ())] + findings.notes
+    if not x.parts and verdict == STRICT:
+        reasons.append("a constant")
+    return Stationarity(
+        verdict,
+        tuple(dict.fromkeys(reasons)) or ("the same function of independent shocks at every step",),
+        stationary=not set(found) - {WEAK},
+        covariance_stationary=not set(found) - {WEAK, MEAN},
+    )
+
+
+def _mean(findings: _Findings, mean: Known) -> None:
+    for note in mean.movement(findings.space.horizon).notes:
+        findings.say(MEAN, note)
+
+
+def _random_parts(findings: _Findings, x: Expression) -> None:
+    _form(findings, x.linear)
+    for term in x.terms:
+        _term(findings, term)
+    _frozen(findings, x)
+
+
+def _term(findings: _Findings, term: Term) -> None:
+    for factor in term.knowns:
+        cyclic = factor.periods is not None
+        why = "; ".join(factor.notes) or "a known path"
+        if cyclic:
+            findings.say(CYCLES, f"a random part is multiplied by a pattern ({why})")
+        else:
+            findings.say(VARIES, f"a random part is multiplied by a known path ({why})")
+    for form in (*term.factors, term.exponent):
+        _form(findings, form)
+    if term.summed is not None:
+        _term(findings, term.summed)
+        findings.say(GROWS, "a running sum of products or exponentials")
+
+
+def _form(findings: _Findings, form: Linear) -> None:
+    for key in form:
+        if isinstance(key, Sum):
+            findings.say(GROWS, f"unit root in {_origin(findings.space, key)}")
+        elif base_of(key).started:
+            _started(findings, key)
+    for source in form.sources:
+        _source(findings, source)
+
+
+def _started(findings: _Findings, key: Key) -> None:
+    base = base_of(key)
+    where = findings.space.origins.get(base, base.source.key)
+    radius = spectral_radius(base.phi)
+    if radius > 1.0 + UNIT_ROOT:
+        findings.say(GROWS, f"explosive root of modulus {1.0 / radius:.6g} in {where}, run from a given past")
+    elif radius > 1.0 - UNIT_ROOT:
+        findings.say(GROWS, f"unit root in {where}")
+    elif base.phi or not _constant_path(base.source):
+        findings.say(SETTLES, f"{where} leaves from a given past and forgets it")
+
+
+def _constant_path(source: Source) -> bool:
+    if source.path is None:
+        return True
+    path = source.path(np.arange(256))
+    return bool(np.abs(path - source.variance).max() <= 1e-12 * source.variance)
+
+
+def _source(findings: _Findings, source: Source) -> None:
+    if source.kind == OPAQUE:
+        for ingredient in source.detail:
+            _random_parts(findings, ingredient)
+            moving = ingredient.mean_path
+            if moving.periods is None or moving.periods:
+                findings.say(CYCLES if moving.periods else VARIES, "; ".join(moving.notes) or "a known path")
+        findings.notes.append(f"moments unknown: {source.reason}")
+    elif source.kind in (GARCH, SQUARES):
+        _heteroskedastic(findings, source)
+    elif not np.isfinite(source.variance):
+        findings.say(INFINITE, f"{source.key} has a law without a variance")
+
+
+def _heteroskedastic(findings: _Findings, source: Source) -> None:
+    process, name = source.detail, (source.owner or source).key
+    strict, why = process.strictly_stationary
+    if process.started:
+        if process.total >= 1.0:
+            findings.say(GROWS, f"{name} leaves from a given variance and {why}")
+        elif _constant_path(source):
+            findings.say(WEAK, f"{name} leaves from its own unconditional variance, known at step 0 only")
+        else:
+            findings.say(SETTLES, f"{name} leaves from a given variance and forgets it")
+        return
+    if not np.isfinite(source.variance):
+        moment = "variance" if source.kind == GARCH else "fourth moment"
+        stands = {True: "strictly stationary", False: "not stationary", None: "strict stationarity open"}[strict]
+        findings.say(INFINITE, f"{name} has no finite {moment}; {stands}: {why}")
+        return
+    findings.notes.append(f"{name} is uncorrelated but not independent: its conditional variance moves")
+
+
+def _frozen(findings: _Findings, x: Expression) -> None:
+    forms = [x.linear, *(f for term in x.terms for f in (*term.factors, term.exponent))]
+    if any(isinstance(key, Frozen) for form in forms for key in form) and not _has_sum(forms):
+        findings.say(SETTLES, "a sum that keeps its value of step 0 for ever")
+
+
+def _has_sum(forms: Iterable[Linear]) -> bool:
+    return any(isinstance(key, Sum) for form in forms for key in form)
+
+
+def _origin(space: Space, key: Key) -> str:
+    if key in space.origins:
+        return space.origins[key]
+    while isinstance(key, Sum):
+        key = key.of
+    return space.origins.get(key, f"the running sum of {base_of(key).source.key}")
