@@ -14,11 +14,15 @@ import importlib
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
-    from procgen.api import digest, load, open_ensemble, render, theory, validate
+    from procgen.api import load
+    from procgen.checks.validate import validate
     from procgen.checks.verdict import Verdict
-    from procgen.ensemble.ensemble import Ensemble
+    from procgen.ensemble.check import check_digest
+    from procgen.ensemble.ensemble import Ensemble, open_ensemble
     from procgen.ensemble.errors import EnsembleError
+    from procgen.ensemble.job import render
     from procgen.spec.model import Spec, SpecError
+    from procgen.theory.series import theory
 
 __version__ = "0.1.0"
 
@@ -28,12 +32,11 @@ _HOMES = {
     "Spec": "procgen.spec.model",
     "SpecError": "procgen.spec.model",
     "Verdict": "procgen.checks.verdict",
-    "digest": "procgen.api",
+    "check_digest": "procgen.ensemble.check",
     "load": "procgen.api",
-    "open_ensemble": "procgen.api",
-    "render": "procgen.api",
-    "theory": "procgen.api",
-    "validate": "procgen.api",
+    "open_ensemble": "procgen.ensemble.ensemble",
+    "render": "procgen.ensemble.job",
+    "validate": "procgen.checks.validate",
 }
 
 __all__ = [
@@ -43,7 +46,7 @@ __all__ = [
     "SpecError",
     "Verdict",
     "__version__",
-    "digest",
+    "check_digest",
     "load",
     "open_ensemble",
     "render",
@@ -54,6 +57,8 @@ __all__ = [
 
 def __getattr__(name: str) -> Any:
     """Public names are imported when they are first used, so that `import procgen` costs nothing."""
+    if name == "theory":  # the package of that name, which can be called
+        return importlib.import_module("procgen.theory")
     if name not in _HOMES:
         raise AttributeError(f"module 'procgen' has no attribute {name!r}")
     value = getattr(importlib.import_module(_HOMES[name]), name)

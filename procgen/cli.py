@@ -40,9 +40,7 @@ def numbers(text: str) -> tuple[int, ...]:
 @guarded
 def render(
     spec: SpecFile,
-    out: Annotated[
-        Path, typer.Option("-o", "--out", metavar="OUT", help="Folder to write.", show_default=False)
-    ],
+    out: Annotated[Path, typer.Option("-o", "--out", metavar="OUT", help="Folder to write.", show_default=False)],
     paths: Annotated[
         int | None, typer.Option(metavar="N", help="Number of paths, instead of the spec's.", min=1)
     ] = None,
@@ -60,9 +58,7 @@ def render(
         typer.Option(metavar="all|NAME,…", help="Terms and hidden outputs to write beside the series."),
     ] = None,
     resume: Annotated[bool, typer.Option("--resume", help="Go on with a render that was stopped.")] = False,
-    overwrite: Annotated[
-        bool, typer.Option("--overwrite", help="Remove the ensemble that is in OUT first.")
-    ] = False,
+    overwrite: Annotated[bool, typer.Option("--overwrite", help="Remove the ensemble that is in OUT first.")] = False,
     scheduler: Annotated[str, typer.Option(metavar="local", help="Who draws: this machine.")] = "local",
 ) -> None:
     """Draw paths of SPEC into the folder OUT: Parquet parts and manifest.json."""
@@ -100,22 +96,14 @@ def validate(
         Path,
         typer.Argument(metavar="OUT|DATA", help="An ensemble, or a Parquet or CSV file.", show_default=False),
     ],
-    spec: Annotated[
-        Path | None, typer.Option(metavar="SPEC", help="The spec that DATA should follow.")
-    ] = None,
-    path_col: Annotated[
-        str | None, typer.Option(metavar="NAME", help="Column of DATA with the path.")
-    ] = None,
-    step_col: Annotated[
-        str | None, typer.Option(metavar="NAME", help="Column of DATA with the step.")
-    ] = None,
+    spec: Annotated[Path | None, typer.Option(metavar="SPEC", help="The spec that DATA should follow.")] = None,
+    path_col: Annotated[str | None, typer.Option(metavar="NAME", help="Column of DATA with the path.")] = None,
+    step_col: Annotated[str | None, typer.Option(metavar="NAME", help="Column of DATA with the step.")] = None,
     false_alarm: Annotated[
         float, typer.Option(metavar="P", help="Chance of a false alarm over all checks.", min=1e-12, max=0.5)
     ] = 0.001,
     json: Json = False,
-    report: Annotated[
-        Path | None, typer.Option(metavar="FILE.html", help="Also write an HTML report.")
-    ] = None,
+    report: Annotated[Path | None, typer.Option(metavar="FILE.html", help="Also write an HTML report.")] = None,
 ) -> None:
     """Compare paths with the theory of their spec.
 

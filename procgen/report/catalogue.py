@@ -87,9 +87,7 @@ def default(parameter: Parameter) -> str:
     if parameter.default is None or parameter.default == ():
         return "optional"
     value = parameter.default
-    return (
-        str(value).lower() if isinstance(value, bool) else f"{value:g}" if _is_number(value) else str(value)
-    )
+    return str(value).lower() if isinstance(value, bool) else f"{value:g}" if _is_number(value) else str(value)
 
 
 def meaning(parameter: Parameter) -> str:
@@ -118,9 +116,7 @@ def _term_page(kind: str, width: int) -> str:
         ("source", term.source),
     ]
     if term.outputs:
-        facts.append(
-            ("outputs", f"{', '.join(term.outputs)} (hidden; use: series.label.output, or --reveal)")
-        )
+        facts.append(("outputs", f"{', '.join(term.outputs)} (hidden; use: series.label.output, or --reveal)"))
     if not term.portable:
         facts.append(("portable", f"no: {term.why_not_portable}"))
     lines = [f"{kind}: {term.purpose}", ""]
@@ -138,9 +134,7 @@ def _law_page(name: str, width: int) -> str:
     lines = [_hanging(f"{name}:", " ".join(purpose.split()), len(name) + 2, width), ""]
     if law.parameters:
         lines += ["parameters", *_parameters(law.parameters, width), ""]
-    written = (
-        f"{{{name}: {{{', '.join(f'{p.name}: …' for p in law.parameters)}}}}}" if law.parameters else name
-    )
+    written = f"{{{name}: {{{', '.join(f'{p.name}: …' for p in law.parameters)}}}}}" if law.parameters else name
     lines += [f"written as   law: {written}", "every law has mean 0 and variance 1 before it is scaled by sd"]
     return "\n".join(lines)
 
