@@ -1,5 +1,8 @@
 """The algebra of moments: exact means, covariances, laws and verdicts of composed series."""
 
+import sys
+from types import ModuleType
+
 from procgen.theory.axis import Axis
 from procgen.theory.expression import Expression
 from procgen.theory.garch import Garch
@@ -20,3 +23,13 @@ __all__ = [
     "Unknown",
     "theory",
 ]
+
+
+class _Callable(ModuleType):
+    """This package under its public name: `procgen.theory(spec)` is `procgen.theory.theory(spec)`."""
+
+    def __call__(self, spec: object) -> Theory:
+        return theory(spec)
+
+
+sys.modules[__name__].__class__ = _Callable
