@@ -50,17 +50,13 @@ class Finding:
 def unit(z: float, error: float, theory: float = 0.0, skew: float = 0.0) -> Finding:
     """A statistic that is standard normal under the theory; the estimate is theory + z·error."""
     log_p = tails.two_sided(*tails.pearson3(z, skew))
-    return Finding(
-        theory, theory + z * error, error, log_p, lambda level: power.shift(level, error, abs(skew))
-    )
+    return Finding(theory, theory + z * error, error, log_p, lambda level: power.shift(level, error, abs(skew)))
 
 
 def normal_mean(mean: float, mu: float, sd: float, n: int) -> Finding:
     """The mean of n independent normals of known standard deviation: exact."""
     error = sd / math.sqrt(n)
-    return Finding(
-        mu, mean, error, tails.normal((mean - mu) / error), lambda level: power.shift(level, error)
-    )
+    return Finding(mu, mean, error, tails.normal((mean - mu) / error), lambda level: power.shift(level, error))
 
 
 def variance(s2: float, sigma2: float, dof: int) -> Finding:

@@ -23,9 +23,7 @@ _CLUSTER_EXCESS = 8.44  # excess of the sum of lagged products of cluster scores
 def shock_checks(series: str, sums: ShockSums, source: str) -> Iterator[Check]:
     """Every test of one series' shocks; `source` says in words how they were recovered."""
     if sums.n == 0:
-        yield Check(
-            series, "recovered shocks", "", "law", outcome="untestable", note="no shock could be recovered"
-        )
+        yield Check(series, "recovered shocks", "", "law", outcome="untestable", note="no shock could be recovered")
         return
     yield from _level_and_spread(series, sums, source)
     yield from _memory(series, sums)
@@ -41,9 +39,7 @@ def _level_and_spread(series: str, sums: ShockSums, source: str) -> Iterator[Che
     root = math.sqrt(n)
     components = sums.scores.component_sums(sums.counts)
     if sums.scores.gaussian:
-        yield Check.of(
-            series, "shocks: mean", "all steps", "level", judge.normal_mean(mean, 0.0, 1.0, n), source
-        )
+        yield Check.of(series, "shocks: mean", "all steps", "level", judge.normal_mean(mean, 0.0, 1.0, n), source)
         if n > 1:
             finding = judge.variance((second - mean * mean) * n / (n - 1), 1.0, n - 1)
             yield Check.of(series, "shocks: variance", "all steps", "spread", finding)
@@ -54,9 +50,7 @@ def _level_and_spread(series: str, sums: ShockSums, source: str) -> Iterator[Che
             series, "shocks: mean", "all steps", "level", judge.unit(mean * root, 1 / root, skew=skew), source
         )
     else:
-        yield Check.of(
-            series, "shocks: level score", "all steps", "level", judge.unit(components[0], 1 / root), source
-        )
+        yield Check.of(series, "shocks: level score", "all steps", "level", judge.unit(components[0], 1 / root), source)
     moments = [law.moment(k) for k in (2, 3, 4, 6)] if no_big_jump(law, n, 2) else [None]
     if all(m is not None for m in moments):
         _, _, m4, m6 = moments
@@ -154,9 +148,7 @@ def _by_step(series: str, sums: ShockSums) -> Iterator[Check]:
     n = sums.n
     level = total / np.sqrt(count)
     upper, lower = chi_square_logs(square - total**2 / count, count - 1)
-    spread = np.where(
-        upper < lower, -ndtri(np.exp(np.maximum(upper, -700))), ndtri(np.exp(np.maximum(lower, -700)))
-    )
+    spread = np.where(upper < lower, -ndtri(np.exp(np.maximum(upper, -700))), ndtri(np.exp(np.maximum(lower, -700))))
     for what, kind, z in (("level", "level", level), ("spread", "spread", spread)):
         yield Check.of(
             series, f"shocks: {what} by step", "sum over steps", kind, judge.squares(float(z @ z), z.size, n)
@@ -172,9 +164,7 @@ def _worst_step(sums: ShockSums, z: NDArray, kind: str) -> tuple[str, str, Findi
     places = np.flatnonzero(sums.profile[0] > 0)
     step = int(places[at]) * sums.width
     probe = f"step {step}" if sums.width == 1 else f"steps {step}–{step + sums.width - 1}"
-    finding = Finding(
-        0.0, float(z[at]), 1.0, judge.worst(logs), lambda level: judge.reach_of_worst(level, z.size)
-    )
+    finding = Finding(0.0, float(z[at]), 1.0, judge.worst(logs), lambda level: judge.reach_of_worst(level, z.size))
     return f"worst: {probe}", kind, finding
 
 

@@ -50,6 +50,11 @@ class Kalman:
         """The predicted state (d, paths) before step 0."""
         return np.zeros((len(self.c), paths))
 
+    def prepare(self, most: int = 4096) -> int:
+        """Compute the gains ahead; returns the step at which they have settled, at most `most`."""
+        self._extend(most - 1)
+        return min(len(self.gains), most)
+
     def innovations(self, y: NDArray, state: NDArray, step: int) -> tuple[NDArray, NDArray]:
         """Standardised innovations (steps, paths) of the deviations `y` from the mean, and the state after them.
 

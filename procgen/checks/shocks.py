@@ -120,9 +120,7 @@ class ShockSums:
     def _across(self, g: NDArray, first_step: int) -> None:
         """Profile by step, and products with the neighbouring path."""
         at = (first_step + np.arange(len(g))) // self.width
-        for row, values in enumerate(
-            (np.full(len(g), float(g.shape[1])), g.sum(axis=1), np.einsum("tp,tp->t", g, g))
-        ):
+        for row, values in enumerate((np.full(len(g), float(g.shape[1])), g.sum(axis=1), np.einsum("tp,tp->t", g, g))):
             np.add.at(self.profile[row], at, values)
         if g.shape[1] > 1:
             self.neighbours += float(np.einsum("tp,tp->", g[:, 1:], g[:, :-1]))
@@ -171,9 +169,7 @@ class CrossSums:
         self.lags = lags
         self.sums = {lag: np.zeros(2) for lag in lags}
 
-    def absorb(
-        self, a: NDArray, b: NDArray, carry: tuple[NDArray, NDArray] | None
-    ) -> tuple[NDArray, NDArray]:
+    def absorb(self, a: NDArray, b: NDArray, carry: tuple[NDArray, NDArray] | None) -> tuple[NDArray, NDArray]:
         """Add a tile of both, (steps, paths), NaN where unknown; returns what to carry to the next tile."""
         reach = max(abs(lag) for lag in self.lags)
         past = 0

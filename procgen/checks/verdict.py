@@ -199,9 +199,7 @@ def headline(rows: Sequence[Check], most: int = 6) -> list[str]:
     for row in rows:
         if row.outcome == "departs":
             groups.setdefault((row.series, row.kind), []).append(row)
-    order = sorted(
-        groups.values(), key=lambda group: (group[0].kind != "structure", min(map(_strength, group)))
-    )
+    order = sorted(groups.values(), key=lambda group: (group[0].kind != "structure", min(map(_strength, group))))
     lines = [sentence(sorted(group, key=_strength)) for group in order[:most]]
     if len(order) > most:
         lines.append(f"and {len(order) - most} more kinds of departure, see the table")

@@ -1,0 +1,257 @@
+"""Anyone's table as an ensemble: a DataFrame, CSV or Parquet in long form, any row order, any column names.
+
+Everything that is wrong with it is named: paths and steps that are missing or there twice, times off the grid,
+text where numbers should be.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from procgen.checks.verdict import Check
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+BLOCK = 1 << 22  # values of one series that are handed on at once
+
+
+class TableError(ValueError):
+    """A table that cannot be read as paths of a spec; the message says what was expected and what is there."""
+
+
+def read_table(path: Path, spec: Any, columns: Mapping[str, str] | None) -> Table:
+    """The table in a CSV or Parquet file; only the columns that are needed are read."""
+    import pandas as pd
+
+    if not path.exists():
+        raise TableError(f"there is no file {path}")
+    suffix = path.suffix.lower()
+    try:
+        if suffix in (".parquet", ".pq"):
+            import pyarrow.parquet as pq
+
+            wanted = Names(pq.read_schema(path).names, spec, columns, path.name)
+            frame = pq.read_table(path, columns=wanted.all).to_pandas(ignore_metadata=True)
+        elif suffix in (".csv", ".tsv", ".txt", ".gz"):
+            separator = "\t" if ".tsv" in path.suffixes else ","
+            head = pd.read_csv(path, sep=separator, nrows=0)
+            wanted = Names(list(head.columns), spec, columns, path.name)
+            frame = pd.read_csv(path, sep=separator, usecols=wanted.all, low_memory=False)
+        else:
+            raise TableError(f"expected a .csv or .parquet file, got {path.name}")
+    except TableError:
+        raise
+    except Exception as error:  # pandas and pyarrow raise whatever their parsers do
+        reason = str(error).strip().splitlines()[0] if str(error).strip() else type(error).__name__
+        raise TableError(f"{path} cannot be read: {reason}") from None
+    return Table(frame, wanted, spec, str(path))
+
+
+def from_frame(frame: pd.DataFrame, spec: Any, columns: Mapping[str, str] | None) -> Table:
+    """A DataFrame in long form; an index with names counts as columns."""
+    if any(name is not None for name in frame.index.names):
+        frame = frame.reset_index()
+    return Table(frame, Names([str(c) for c in frame.columns], spec, columns, "the table"), spec, "the table")
+
+
+class Names:
+    """Which column of the table is what."""
+
+    def __init__(self, found: list[str], spec: Any, given: Mapping[str, str] | None, where: str):
+        given = {k: v for k, v in (given or {}).items() if v is not None}
+        known = {"path", "step", "time", *spec.series}
+        for role in given:
+            if role not in known:
+                raise TableError(
+                    f"expected one of path, step, time, {', '.join(spec.series)} to be mapped, got {role!r}"
+                )
+        self.found, self.where = found, where
+        self.path = self._pick("path", given, False)
+        self.step = self._pick("step", given, False)
+        self.time = None if self.step else self._pick("time", given, False)
+        self.series = {name: self._pick(name, given, True) for name in spec.series}
+        self.all = [c for c in (self.path, self.step, self.time, *self.series.values()) if c is not None]
+
+    def _pick(self, role: str, given: Mapping[str, str], needed: bool) -> Any:
+        name = given.get(role, role)
+        if name in self.found:
+            return name
+        if needed or role in given:
+            from procgen.spec.words import did_you_mean
+
+            hint = did_you_mean(name, self.found)
+            raise TableError(
+                f"{self.where} has no column {name!r} for {role}; its columns are {', '.join(self.found)}"
+                + (f" ({hint})" if hint else "")
+            )
+        return None
+
+
+class Table:
+    """A table put in order: dense arrays, NaN where something is missing, and checks that name it."""
+
+    def __init__(self, frame: pd.DataFrame, names: Names, spec: Any, where: str):
+        self.spec, self.where, self.faults = spec, where, []
+        if not len(frame):
+            raise TableError(f"{where} has no rows")
+        self._checks: list[Check] = []
+        path, self.labels = _codes(frame[names.path]) if names.path else (np.zeros(len(frame), np.int64), ["0"])
+        step = self._steps(frame, names, path)
+        self.paths, self.steps = len(self.labels), int(step.max()) + 1
+        if self.paths * self.steps > 4 * len(frame) + 1_000_000:
+            raise TableError(
+                f"{where}: {len(frame)} rows cannot be {self.paths} paths of {self.steps} steps; "
+                "is the right column named for the step?"
+            )
+        self.rows = self.paths * self.steps
+        self._place(path, step)
+        self._values = {name: self._numbers(frame[column], name) for name, column in names.series.items()}
+
+    def checks(self) -> list[Check]:
+        return self._checks
+
+    def about(self) -> dict[str, Any]:
+        return {
+            "title": self.spec.title,
+            "paths": self.paths,
+            "steps": self.steps,
+            "digest": None,
+            "spec_digest": self.spec.digest(),
+            "where": self.where,
+        }
+
+    def blocks(self) -> Iterator[tuple[int, int, Mapping[str, np.ndarray]]]:
+        """Blocks of whole paths."""
+        width = max(1, min(1024, BLOCK // self.steps))
+        for first in range(0, self.paths, width):
+            count = min(width, self.paths - first)
+            yield first, 0, {name: self._block(values, first, count) for name, values in self._values.items()}
+
+    def _block(self, values: NDArray, first: int, count: int) -> NDArray:
+        low, high = np.searchsorted(self._key, [first * self.steps, (first + count) * self.steps])
+        out = np.full(count * self.steps, np.nan)
+        out[self._key[low:high] - first * self.steps] = values[self._order[low:high]]
+        return out.reshape(count, self.steps)
+
+    # reading
+
+    def _steps(self, frame: pd.DataFrame, names: Names, path: NDArray) -> NDArray[np.int64]:
+        if names.step is not None:
+            return self._numbered(frame[names.step], names.step)
+        if names.time is not None:
+            return self._timed(frame[names.time], names.time)
+        self._say("step order", "no column of steps or times: rows of a path are taken in their order", "reported")
+        order = np.argsort(path, kind="stable")
+        starts = np.searchsorted(path[order], np.arange(len(self.labels)))
+        step = np.empty(len(path), dtype=np.int64)
+        step[order] = np.arange(len(path)) - starts[path[order]]
+        return step
+
+    def _numbered(self, column: pd.Series, name: str) -> NDArray[np.int64]:
+        import pandas as pd
+
+        numbers = pd.to_numeric(column, errors="coerce").to_numpy(dtype=float)
+        bad = ~np.isfinite(numbers) | (numbers != np.rint(numbers)) | (np.abs(numbers) > 2**53)
+        if bad.any():
+            row = int(np.argmax(bad))
+            raise TableError(f"{self.where}: expected whole steps in {name}, got {column.iloc[row]!r} in row {row}")
+        step = numbers.astype(np.int64)
+        lowest = int(step.min())
+        if lowest == 1 and int(step.max()) == self.spec.time.steps:
+            self._say("step order", f"steps in {name} count from 1; taken as steps 0 to {step.max() - 1}", "reported")
+            return step - 1
+        if lowest < 0:
+            raise TableError(f"{self.where}: expected steps from 0 on in {name}, got {lowest}")
+        return step
+
+    def _timed(self, column: pd.Series, name: str) -> NDArray[np.int64]:
+        import pandas as pd
+
+        times = pd.to_datetime(column, errors="coerce", utc=False, format="mixed")
+        if isinstance(times.dtype, np.dtype) and times.dtype == object:
+            times = pd.to_datetime(column, errors="coerce", utc=True, format="mixed")
+        if times.isna().any():
+            row = int(np.argmax(times.isna().to_numpy()))
+            raise TableError(f"{self.where}: {column.iloc[row]!r} in row {row} of {name} is no time")
+        naive = times.dt.tz is None
+        utc = times.dt.tz_localize("UTC") if naive else times.dt.tz_convert("UTC")
+        stamps = utc.dt.tz_localize(None).to_numpy().astype("datetime64[us]").astype(np.int64)
+        if self.spec.time.start is None:
+            return np.unique(stamps, return_inverse=True)[1].astype(np.int64)
+        return self._on_grid(stamps, times if naive else None, column, name)
+
+    def _on_grid(self, stamps: NDArray, naive: pd.Series | None, column: pd.Series, name: str) -> NDArray[np.int64]:
+        """Steps of the stamps on the spec's calendar; times without a zone are in UTC, or else in the spec's."""
+        grid = np.asarray(self.spec.time.stamps(0, self.spec.time.steps)).astype(np.int64)
+        step = np.searchsorted(grid, stamps)
+        on = (step < len(grid)) & (grid[np.minimum(step, len(grid) - 1)] == stamps)
+        if not on.all() and naive is not None and self.spec.time.zone:
+            local = naive.dt.tz_localize(self.spec.time.zone, ambiguous=True, nonexistent="shift_forward")
+            other = local.dt.tz_convert("UTC").dt.tz_localize(None).to_numpy().astype("datetime64[us]").astype(np.int64)
+            moved = np.searchsorted(grid, other)
+            fits = (moved < len(grid)) & (grid[np.minimum(moved, len(grid) - 1)] == other)
+            if fits.sum() > on.sum():
+                step, on = moved, fits
+        if not on.all():
+            row = int(np.argmax(~on))
+            first = np.array(grid[0], dtype="datetime64[us]")
+            raise TableError(
+                f"{self.where}: {column.iloc[row]} in row {row} of {name} is no step of the spec, whose time starts at "
+                f"{first} UTC; {int((~on).sum())} of {len(on)} rows are off its grid"
+            )
+        return step.astype(np.int64)
+
+    def _place(self, path: NDArray, step: NDArray) -> None:
+        """Sort rows by path and step; name what is missing or there twice."""
+        key = path * self.steps + step
+        ordered = bool(np.all(key[1:] > key[:-1]))
+        self._order = np.arange(len(key)) if ordered else np.argsort(key, kind="stable")
+        self._key = key[self._order]
+        if not ordered:
+            self._say("row order", "rows are not in the order of path and step; they were sorted", "reported")
+        twice = np.flatnonzero(self._key[1:] == self._key[:-1])
+        fault = ""
+        if twice.size:
+            fault = f"{twice.size} rows are there twice, the first {self._where(self._key[twice[0]])}"
+            keep = np.concatenate([[True], self._key[1:] != self._key[:-1]])
+            self._key, self._order = self._key[keep], self._order[keep]
+        missing = self.rows - len(self._key)
+        if missing:
+            gap = np.flatnonzero(self._key != np.arange(len(self._key)))
+            first = self._where(int(gap[0]) if gap.size else len(self._key))
+            fault = "; ".join(filter(None, [fault, f"{missing} rows are missing, the first {first}"]))
+        self._checks.append(Check.fact("", "every path and step once", "all rows", fault, "each is there once"))
+
+    def _where(self, key: int) -> str:
+        return f"path {self.labels[int(key) // self.steps]}, step {int(key) % self.steps}"
+
+    def _numbers(self, column: pd.Series, name: str) -> NDArray:
+        import pandas as pd
+
+        values = pd.to_numeric(column, errors="coerce").to_numpy(dtype=float, na_value=np.nan)
+        text = np.isnan(values) & column.notna().to_numpy()
+        if text.any():
+            row = int(np.argmax(text))
+            fault = f"{int(text.sum())} values are no numbers, the first {column.iloc[row]!r} in row {row}"
+            self._checks.append(Check.fact(name, "numbers", "all rows", fault))
+        return values
+
+    def _say(self, what: str, note: str, outcome: str) -> None:
+        self._checks.append(Check("", what, "all rows", "structure", outcome=outcome, note=note))
+
+
+def _codes(column: pd.Series) -> tuple[NDArray[np.int64], list[Any]]:
+    """Paths numbered in the order of their labels."""
+    import pandas as pd
+
+    if column.isna().any():
+        row = int(np.argmax(column.isna().to_numpy()))
+        raise TableError(f"row {row} has no path; every row needs one in {column.name}")
+    codes, labels = pd.factorize(column, sort=True)
+    return codes.astype(np.int64), list(labels)

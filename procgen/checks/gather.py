@@ -1,0 +1,278 @@
+"""One pass over the data: tiles in, sums out. Sums of different paths merge; memory follows the widest part.
+
+Blocks come as (first_path, first_step, {series: (paths, steps)}); the blocks of one range of paths come in the order
+of their steps. A lane carries everything that a range of paths needs from one block to the next.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from procgen.checks.probes import CrossPlan, SeriesPlan
+from procgen.checks.recover import Cannot, Expected, Route
+from procgen.checks.shocks import MEMORY_LAGS, CrossSums, ShockLane, ShockSums
+from procgen.checks.structure import Precision, Structure
+from procgen.checks.sums import Kept, Moments, Powers
+
+LANE = 1024  # paths in one lane
+TILE = 1 << 18  # values of one series in a tile
+
+
+@dataclass
+class Plan:
+    """All that the pass needs to know: series, probes, ways to the shocks, and their pairs."""
+
+    steps: int
+    series: Sequence[SeriesPlan]
+    precision: Sequence[Precision]
+    cross: Sequence[CrossPlan]
+    routes: Mapping[str, Route | Cannot]
+    shock_pairs: Mapping[tuple[str, str], Expected]
+
+    def __post_init__(self) -> None:
+        self.names = [plan.name for plan in self.series]
+        sizes = [len(plan.steps) for plan in self.series]
+        self.offset = np.concatenate([[0], np.cumsum(sizes)]).astype(int)
+        self.products = [
+            (column, i, j) for column, plan in enumerate(self.series) for i, j in [*_diagonal(plan), *plan.pairs]
+        ]
+        self.kept = [(column, i) for column, plan in enumerate(self.series) for i in sorted(plan.scores)]
+
+
+def _diagonal(plan: SeriesPlan) -> list[tuple[int, int]]:
+    return [(i, i) for i in range(len(plan.steps))]
+
+
+class Lane:
+    """What is carried for one range of paths until its last step."""
+
+    def __init__(self, plan: Plan, first_path: int, paths: int):
+        self.first_path, self.paths, self.step = first_path, paths, 0
+        self.probes = np.full((paths, plan.offset[-1]), np.nan)
+        self.pools = [np.zeros((paths, 1 + len(p.pool.lags))) if p.pool else None for p in plan.series]
+        self.tails: list[NDArray | None] = [None] * len(plan.series)
+        self.prints = np.zeros((len(plan.series), paths), dtype=np.uint64)
+        self.carriers: dict[str, Any] = {}
+        self.shocks: dict[str, ShockLane] = {}
+        self.carry: dict[tuple[str, str], Any] = {}
+
+
+@dataclass
+class Gather:
+    """The sums of one pass. `absorb` blocks, `merge` others, then hand it to the judge."""
+
+    plan: Plan
+    paths: int = 0
+    unfinished: int = 0
+    lanes: dict[int, Lane] = field(default_factory=dict)
+
+    def __post_init__(self) -> None:
+        plan = self.plan
+        self.structure = Structure(plan.precision)
+        self.moments = Moments(int(plan.offset[-1]))
+        self.deviations = Powers(int(plan.offset[-1]))
+        self.products = Powers(len(plan.products))
+        self.crossed = Powers(sum(len(pair.places) for pair in plan.cross))
+        self.pooled = [Powers(1 + len(p.pool.lags)) if p.pool else None for p in plan.series]
+        self.kept = Kept(len(plan.kept))
+        self.gaps: dict[str, float] = {}  # series without chance -> largest distance from theory
+        self.noise: dict[str, float] = {}  # series -> variance that rounding adds to a recovered shock
+        self.shocks = {
+            name: ShockSums(route.scores, plan.steps, _lags(series))
+            for series, (name, route) in zip(plan.series, plan.routes.items(), strict=True)
+            if isinstance(route, Route)
+        }
+        self.cross = {pair: CrossSums() for pair in plan.shock_pairs}
+
+    # blocks
+
+    def absorb(self, first_path: int, first_step: int, values: Mapping[str, NDArray]) -> None:
+        """Add a block. Raises ValueError when it does not follow the last one of its paths."""
+        some = values[self.plan.names[0]]
+        for start in range(0, some.shape[0], LANE):
+            rows = slice(start, min(start + LANE, some.shape[0]))
+            lane = self._lane(first_path + start, rows.stop - start, first_step)
+            height = max(64, TILE // lane.paths)
+            for t in range(0, some.shape[1], height):
+                tiles = [
+                    np.ascontiguousarray(values[name][rows, t : t + height].T, dtype=float) for name in self.plan.names
+                ]
+                self._tile(lane, tiles)
+            if lane.step >= self.plan.steps:
+                self._finish(self.lanes.pop(lane.first_path))
+
+    def _lane(self, first_path: int, paths: int, first_step: int) -> Lane:
+        lane = self.lanes.get(first_path)
+        if lane is None and first_step == 0:
+            lane = self.lanes[first_path] = Lane(self.plan, first_path, paths)
+        if lane is None or lane.step != first_step or lane.paths != paths:
+            raise ValueError(
+                f"expected the blocks of a range of paths in the order of their steps, got step {first_step} of "
+                f"paths {first_path}–{first_path + paths - 1} out of turn"
+            )
+        return lane
+
+    def _tile(self, lane: Lane, tiles: Sequence[NDArray]) -> None:
+        scores: dict[str, NDArray] = {}
+        for column, (plan, x) in enumerate(zip(self.plan.series, tiles, strict=True)):
+            self.structure.absorb(column, x, lane.first_path, lane.step, lane.prints[column])
+            self._probe(lane, column, x)
+            self._pool(lane, column, x)
+            if not self.plan.precision[column].random:
+                self._compare(plan, x, lane.step)
+            if plan.name in self.shocks:
+                scores[plan.name] = self._recover(lane, plan.name, x)
+        self._cross(lane, scores)
+        lane.step += len(tiles[0])
+
+    def _probe(self, lane: Lane, column: int, x: NDArray) -> None:
+        plan = self.plan.series[column]
+        for i, step in enumerate(plan.steps):
+            if lane.step <= step < lane.step + len(x):
+                lane.probes[:, self.plan.offset[column] + i] = x[step - lane.step]
+
+    def _pool(self, lane: Lane, column: int, x: NDArray) -> None:
+        pool = self.plan.series[column].pool
+        if pool is None or lane.step + len(x) <= pool.first:
+            return
+        start = max(pool.first - lane.step, 0)
+        at = lane.step + start - pool.first  # place of the first new row in the window
+        rows = x[start : start + pool.last - pool.first - at] - pool.mean[at : at + len(x) - start, None]
+        past = lane.tails[column]
+        sums = lane.pools[column]
+        sums[:, 0] += rows.sum(axis=0)
+        both = rows if past is None else np.concatenate([past, rows])
+        before = len(both) - len(rows)
+        for k, lag in enumerate(pool.lags):
+            first = max(before, lag)
+            if first < len(both):
+                product = np.einsum("tp,tp->p", both[first:], both[first - lag : len(both) - lag])
+                known = pool.covariance[k, at + first - before : at + len(rows)]
+                sums[:, 1 + k] += product - np.nansum(known)
+        lane.tails[column] = both[max(0, len(both) - max(pool.lags)) :].copy()
+
+    def _compare(self, plan: SeriesPlan, x: NDArray, step: int) -> None:
+        """A series without chance is its mean, exactly (but for rounding)."""
+        mean = plan.theory.mean(np.arange(step, step + len(x)))
+        if mean is not None:
+            with np.errstate(invalid="ignore"):
+                gap = np.nanmax(np.abs(x - mean[:, None]))
+            self.gaps[plan.name] = max(self.gaps.get(plan.name, 0.0), float(gap))
+
+    def _recover(self, lane: Lane, name: str, x: NDArray) -> NDArray:
+        route = self.plan.routes[name]
+        if name not in lane.shocks:
+            lane.carriers[name] = route.start(lane.paths)
+            lane.shocks[name] = ShockLane.start(lane.paths)
+            if route.grain and route.kalman is None and name not in self.noise:
+                self.noise[name] = _rounding_noise(route, x[:, : min(64, lane.paths)], lane.first_path)
+        z, lane.carriers[name] = route.tile(x, lane.carriers[name], lane.first_path, lane.step)
+        return self.shocks[name].absorb(z, lane.step, lane.shocks[name])
+
+    def _cross(self, lane: Lane, scores: Mapping[str, NDArray]) -> None:
+        for pair, sums in self.cross.items():
+            wait = self.plan.shock_pairs[pair].ready - lane.step
+            a, b = (scores[name][max(0, wait) :] for name in pair)
+            if len(a):
+                lane.carry[pair] = sums.absorb(a, b, lane.carry.get(pair))
+
+    # the end of a range of paths
+
+    def _finish(self, lane: Lane) -> None:
+        plan = self.plan
+        self.paths += lane.paths
+        self.structure.close(lane.first_path, lane.prints.T.copy())
+        usable = np.isfinite(lane.probes).all(axis=1)
+        rows = lane.probes - _means(plan)
+        self.moments.absorb(rows[usable])
+        self.deviations.absorb(rows)
+        self.products.absorb(_products(plan, rows))
+        self.crossed.absorb(_cross_products(plan, rows))
+        if plan.kept:
+            places = [plan.offset[column] + i for column, i in plan.kept]
+            self.kept.absorb(lane.first_path, lane.probes[:, places])
+        for powers, sums, series in zip(self.pooled, lane.pools, plan.series, strict=True):
+            if powers is not None:
+                width = series.pool.last - series.pool.first
+                powers.absorb(sums / np.array([width] + [width - lag for lag in series.pool.lags]))
+        for name, shock_lane in lane.shocks.items():
+            self.shocks[name].finish(shock_lane)
+
+    def finish(self) -> None:
+        """To be called after the last block; counts paths that never reached the last step."""
+        self.unfinished += sum(lane.paths for lane in self.lanes.values())
+        self.lanes.clear()
+
+    def merge(self, other: Gather) -> None:
+        """Add the sums of other paths."""
+        self.paths += other.paths
+        self.unfinished += other.unfinished
+        for name in ("structure", "moments", "deviations", "products", "crossed", "kept"):
+            getattr(self, name).merge(getattr(other, name))
+        for mine, theirs in zip(self.pooled, other.pooled, strict=True):
+            if mine is not None:
+                mine.merge(theirs)
+        for mine, theirs in ((self.gaps, other.gaps), (self.noise, other.noise)):
+            for name, value in theirs.items():
+                mine[name] = max(mine.get(name, 0.0), value)
+        for name, sums in self.shocks.items():
+            sums.merge(other.shocks[name])
+        for pair, sums in self.cross.items():
+            sums.merge(other.cross[pair])
+
+
+def _lags(plan: SeriesPlan) -> tuple[int, ...]:
+    season = (plan.period,) if plan.period and plan.period not in MEMORY_LAGS and plan.period <= 1024 else ()
+    return MEMORY_LAGS + season
+
+
+def _means(plan: Plan) -> NDArray:
+    return np.concatenate([np.zeros(len(p.steps)) if p.mean is None else p.mean for p in plan.series])
+
+
+def _products(plan: Plan, rows: NDArray) -> NDArray:
+    """Products of deviations minus their theory; NaN where theory does not know them."""
+    out = np.full((len(rows), len(plan.products)), np.nan)
+    for k, (column, i, j) in enumerate(plan.products):
+        series, at = plan.series[column], plan.offset[column]
+        known = series.covariance.get((i, j)) if i != j else _entry(series.variance, i)
+        if series.mean is not None and known is not None and np.isfinite(known):
+            out[:, k] = rows[:, at + i] * rows[:, at + j] - known
+    return out
+
+
+def _entry(values: NDArray | None, i: int) -> float | None:
+    return None if values is None else float(values[i])
+
+
+def _cross_products(plan: Plan, rows: NDArray) -> NDArray:
+    columns = []
+    for pair in plan.cross:
+        for (i, j), known in zip(pair.places, pair.covariance, strict=True):
+            product = rows[:, plan.offset[pair.first] + i] * rows[:, plan.offset[pair.second] + j]
+            columns.append(product - (np.nan if known is None else known))
+    return np.array(columns).T if columns else np.zeros((len(rows), 0))
+
+
+def _rounding_noise(route: Route, x: NDArray, first_path: int) -> float:
+    """Variance that rounding adds to a recovered shock: what a shift within the cells does to it, squared."""
+    plain, moved = route.start(x.shape[1]), route.start(x.shape[1])
+    shift = route.grain * dither_of(first_path, x)
+    with np.errstate(all="ignore"):
+        a, b = plain.tile(x), moved.tile(x + shift)
+        if not isinstance(a, np.ndarray) or not isinstance(b, np.ndarray):
+            return np.inf
+        change = (b - a) ** 2
+    known = np.isfinite(change)
+    return 2 * float(change[known].mean()) if known.any() else 0.0
+
+
+def dither_of(first_path: int, x: NDArray) -> NDArray:
+    from procgen.checks.recover import dither
+
+    return dither(first_path, x.shape[1], 0, x.shape[0])

@@ -1,0 +1,222 @@
+"""Where theory and data are compared, and what theory says there: everything the pass over the data needs.
+
+All numbers of theory are computed before the data are read. What theory does not know is None, with its reason.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, field
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from procgen.checks.scores import Scores
+
+GAUSSIAN_WINDOW = 192  # steps of a pooled statistic with an exact law (its cost grows with the cube)
+WINDOW = 4096  # steps of a pooled statistic without one
+PAIR_LIMIT = 36  # pairs of series that are compared
+
+
+def probe_steps(steps: int) -> tuple[int, ...]:
+    """About a dozen steps: the start, where the start matters, the middle and the end, each with a neighbour."""
+    wanted = [0, 1, 2, 4, steps // 16, steps // 4, steps // 2, steps // 2 + 1, 3 * steps // 4 + 1]
+    wanted += [steps - 2, steps - 1]
+    return tuple(sorted({t for t in wanted if 0 <= t < steps}))
+
+
+def probe_pairs(steps: Sequence[int]) -> tuple[tuple[int, int], ...]:
+    """Pairs of positions in `steps`: neighbours, and one long reach."""
+    n = len(steps)
+    pairs = [(i, i + 1) for i in range(n - 1)]
+    if n > 3:
+        pairs += [(0, 2), (0, n - 1)]
+    return tuple(pairs)
+
+
+@dataclass
+class SeriesPlan:
+    """One series: its probes, their theory, the window of pooled statistics, and the marginal laws."""
+
+    name: str
+    steps: NDArray[np.int64]
+    theory: Any
+    grain: float = 0.0  # the distance of neighbouring values as stored; 0 when it does not matter
+    pairs: tuple[tuple[int, int], ...] = ()
+    mean: NDArray | None = None
+    variance: NDArray | None = None
+    covariance: dict[tuple[int, int], float | None] = field(default_factory=dict)
+    gaussian: bool = False
+    highest: float = 0.0
+    scores: dict[int, Scores] = field(default_factory=dict)  # position of a probe -> its marginal law
+    excess: dict[int, float | None] = field(default_factory=dict)
+    pool: Pool | None = None
+    period: int | None = None
+
+    def reason(self, name: str) -> str:
+        return self.theory.reason(name) or "theory has no closed form"
+
+    @property
+    def constant(self) -> NDArray[np.bool_]:
+        """Probes at which theory leaves nothing to chance."""
+        if self.variance is None:
+            return np.zeros(len(self.steps), dtype=bool)
+        return self.variance <= 0.0
+
+
+@dataclass
+class Pool:
+    """Averages over a window of steps: what is averaged along each path, minus its theory.
+
+    Row k of `theory` is subtracted from product k: the deviation itself, its square, and lagged products.
+    """
+
+    first: int
+    last: int  # the window is first .. last - 1
+    lags: tuple[int, ...]
+    mean: NDArray  # of the window
+    covariance: NDArray  # (lags, window): Cov(x(t), x(t - lag)), NaN where t - lag lies before the window
+    exact: NDArray | None = None  # (1 + lags, window): eigenvalues of each average, where its law is exact
+
+    def statistics(self) -> list[str]:
+        return ["mean over steps"] + [
+            "variance over steps" if lag == 0 else "autocovariance over steps" for lag in self.lags
+        ]
+
+
+class Marginal:
+    """A known law at a probe, made to look like a law of standardised shocks (so that Scores can read it)."""
+
+    gaussian = False
+
+    def __init__(self, law: Any, mean: float, sd: float):
+        self.frozen, self.mean, self.sd = law, mean, sd
+
+    def distribution(self) -> Marginal:
+        return self
+
+    def cdf(self, z: NDArray) -> NDArray:
+        return self.frozen.cdf(self.mean + self.sd * np.asarray(z))
+
+    def sf(self, z: NDArray) -> NDArray:
+        return self.frozen.sf(self.mean + self.sd * np.asarray(z))
+
+    def pdf(self, z: NDArray) -> NDArray:
+        return self.frozen.pdf(self.mean + self.sd * np.asarray(z)) * self.sd
+
+    def ppf(self, p: Any) -> Any:
+        return (self.frozen.ppf(p) - self.mean) / self.sd
+
+
+def plan_series(name: str, theory: Any, steps: int, grain: float, periods: Sequence[int]) -> SeriesPlan:
+    """The plan of one series from its theory."""
+    at = np.array(probe_steps(steps), dtype=np.int64)
+    plan = SeriesPlan(name, at, theory, grain, probe_pairs(at))
+    plan.mean, plan.variance = theory.mean(at), theory.variance(at)
+    plan.highest = float(theory.highest_moment or 0.0)
+    plan.gaussian = bool(theory.gaussian)
+    plan.period = next((p for p in periods if 1 < p < steps), None)
+    for i, j in plan.pairs:
+        value = theory.covariance(at[i : i + 1], at[j : j + 1])
+        plan.covariance[i, j] = None if value is None else float(np.ravel(value)[0])
+    if plan.mean is not None and plan.variance is not None:
+        _marginals(plan)
+        plan.pool = _pool(plan, steps)
+    return plan
+
+
+def _marginals(plan: SeriesPlan) -> None:
+    """Known laws at three of the probes, and the kurtosis where the law is not known."""
+    assert plan.mean is not None and plan.variance is not None
+    moving = np.flatnonzero(~plan.constant)
+    chosen = sorted({moving[0], moving[len(moving) // 2], moving[-1]}) if len(moving) else []
+    for i in map(int, chosen):
+        law = plan.theory.marginal(int(plan.steps[i]))
+        if law is not None and np.isfinite(plan.variance[i]):
+            plan.scores[i] = Scores(Marginal(law, float(plan.mean[i]), float(np.sqrt(plan.variance[i]))))
+    for i in map(int, () if plan.gaussian else moving):
+        plan.excess[i] = plan.theory.excess_kurtosis_at(int(plan.steps[i]))
+
+
+def _pool(plan: SeriesPlan, steps: int) -> Pool | None:
+    width = min(steps, GAUSSIAN_WINDOW if plan.gaussian else WINDOW)
+    if width < 8:
+        return None
+    first = steps - width
+    window = np.arange(first, steps, dtype=np.int64)
+    lags = [0, 1, 2] + ([plan.period] if plan.period and 2 < plan.period < width // 2 else [])
+    mean = plan.theory.mean(window)
+    rows = np.full((len(lags), width), np.nan)
+    for k, lag in enumerate(lags):
+        values = plan.theory.covariance(window[lag:], window[: width - lag])
+        if values is None:
+            return None
+        rows[k, lag:] = values
+    if not np.isfinite(rows[0]).all() or not rows[0].max() > 0:
+        return None
+    rows[0] += _rounding(plan.grain)
+    pool = Pool(first, steps, tuple(lags), mean, rows)
+    if plan.gaussian:
+        pool.exact = _eigenvalues(plan, window, tuple(lags))
+    return pool
+
+
+def _rounding(grain: float) -> float:
+    return grain * grain / 12
+
+
+def _eigenvalues(plan: SeriesPlan, window: NDArray, lags: tuple[int, ...]) -> NDArray | None:
+    """Eigenvalues of each average as a quadratic form in independent normals."""
+    gamma = plan.theory.covariance(window[:, None], window[None, :])
+    if gamma is None:
+        return None
+    width = len(window)
+    gamma = 0.5 * (gamma + gamma.T) + _rounding(plan.grain) * np.eye(width)
+    values, vectors = np.linalg.eigh(gamma)
+    root = vectors * np.sqrt(np.maximum(values, 0.0))
+    rows = [np.zeros(width)]
+    rows[0][0] = float(gamma.sum()) / width**2  # the variance of the mean over steps
+    for lag in lags:
+        form = np.zeros((width, width))
+        at = np.arange(lag, width)
+        form[at, at - lag] += 0.5
+        form[at - lag, at] += 0.5
+        rows.append(np.linalg.eigvalsh(root.T @ (form / (width - lag)) @ root))
+    return np.array(rows)
+
+
+@dataclass
+class CrossPlan:
+    """Two series: covariances of first(t) and second(s) at pairs of their probes."""
+
+    first: int
+    second: int
+    places: tuple[tuple[int, int], ...]
+    covariance: tuple[float | None, ...]
+    reason: str
+    gaussian: bool
+
+
+def plan_cross(plans: Sequence[SeriesPlan], cross: Callable[[str, str], Any]) -> list[CrossPlan]:
+    """Pairs of series at a few common probes."""
+    out: list[CrossPlan] = []
+    for i, a in enumerate(plans):
+        for j in range(i + 1, len(plans)):
+            if len(out) == PAIR_LIMIT:
+                return out
+            out.append(_cross_pair(plans, i, j, cross(a.name, plans[j].name)))
+    return out
+
+
+def _cross_pair(plans: Sequence[SeriesPlan], i: int, j: int, theory: Any) -> CrossPlan:
+    a, b = plans[i], plans[j]
+    n = len(a.steps)
+    middle = int(np.searchsorted(a.steps, a.steps[-1] // 2 + 1)) if n > 2 else 0
+    places = sorted({(0, 0), (middle, middle), (n - 1, n - 1)} | ({(n - 1, n - 2), (n - 2, n - 1)} if n > 1 else set()))
+    values, reason = [], ""
+    for p, q in places:
+        value = theory.covariance(a.steps[p : p + 1], b.steps[q : q + 1])
+        reason = reason or (theory.reason() or "" if value is None else "")
+        values.append(None if value is None else float(np.ravel(value)[0]))
+    return CrossPlan(i, j, tuple(places), tuple(values), reason, a.gaussian and b.gaussian)

@@ -1,0 +1,211 @@
+"""How the shocks of a series are recovered: by undoing its one source, or as Kalman innovations of a Gaussian sum.
+
+Also: what the recovered shocks of two series must have in common.
+"""
+
+from __future__ import annotations
+
+from collections import OrderedDict
+from dataclasses import dataclass, field
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from procgen.checks.kalman import Kalman
+from procgen.checks.scores import Scores
+
+LARGEST_STATE = 300  # elements of the state up to which a Kalman filter is run
+SMALL_STATE = 64  # up to here it is preferred to undoing: it also knows how the series starts
+COARSE = 0.5  # rounding beyond this share of the shock's standard deviation hides the shock
+SPAN = 50  # lags over which correlations between two series' shocks are followed
+_CACHED = 256
+
+
+class Cannot(str):
+    """Why the shocks of a series cannot be recovered, in words."""
+
+
+@dataclass
+class Route:
+    """The way to one series' shocks.
+
+    Attributes
+    ----------
+    scores : Scores
+        Of the law of the shocks that come out.
+    words : str
+        How they are recovered.
+    source : object
+        The primary source behind an undone series; None for innovations.
+    """
+
+    series: str
+    scores: Scores
+    words: str
+    theory: Any
+    graph: Any
+    grain: float
+    kalman: Kalman | None = None
+    source: Any = None
+    _means: OrderedDict[tuple[int, int], NDArray] = field(default_factory=OrderedDict, repr=False)
+
+    def start(self, paths: int) -> Any:
+        """A carrier for `paths` paths, before step 0."""
+        if self.kalman is not None:
+            return self.kalman.start(paths)
+        from procgen.terms.recover import recovery
+
+        return recovery(self.graph, self.series, paths)
+
+    def tile(self, x: NDArray, carrier: Any, first_path: int, first_step: int) -> tuple[NDArray, Any]:
+        """Standardised shocks (steps, paths) of the next tile of values, and the carrier after it."""
+        if self.grain:
+            x = x + self.grain * dither(first_path, x.shape[1], first_step, x.shape[0])
+        if self.kalman is not None:
+            return self.kalman.innovations(x - self._mean(first_step, len(x)), carrier, first_step)
+        with np.errstate(all="ignore"):
+            z = carrier.tile(x)
+        return (z if isinstance(z, np.ndarray) else np.full(x.shape, np.nan)), carrier
+
+    def _mean(self, first: int, steps: int) -> NDArray:
+        key = (first, steps)
+        if key not in self._means:
+            self._means[key] = np.asarray(self.theory.mean(np.arange(first, first + steps)))[:, None]
+            if len(self._means) > _CACHED:
+                self._means.popitem(last=False)
+        return self._means[key]
+
+
+def dither(first_path: int, paths: int, first_step: int, steps: int) -> NDArray:
+    """Numbers in (-1/2, 1/2), a fixed function of path and step: they spread rounded values over their cells."""
+    step = np.arange(first_step, first_step + steps, dtype=np.uint64)[:, None]
+    path = np.arange(first_path, first_path + paths, dtype=np.uint64)[None, :]
+    x = step * np.uint64(0x9E3779B97F4A7C15) + path * np.uint64(0xD1B54A32D192ED03)
+    for shift, factor in ((30, 0xBF58476D1CE4E5B9), (27, 0x94D049BB133111EB)):
+        x ^= x >> np.uint64(shift)
+        x *= np.uint64(factor)
+    x ^= x >> np.uint64(31)
+    return (x >> np.uint64(11)).astype(float) * 2.0**-53 - (0.5 - 2.0**-54)
+
+
+def route(name: str, theory: Any, graph: Any, grain: float) -> Route | Cannot:
+    """The best way to the shocks of a series, or why there is none."""
+    from procgen.terms.recover import recovery
+
+    system = theory.system() if theory.gaussian else None
+    size = len(system.initial) if system is not None and system.noise_path is None else LARGEST_STATE + 1
+    if size == 0 or (system is not None and not np.any(system.noise)):
+        return Cannot("nothing is left to chance")
+    undone = recovery(graph, name, 1)
+    if size <= (LARGEST_STATE if not undone else SMALL_STATE):
+        return _by_filter(name, theory, graph, grain, system)
+    if not undone:
+        return Cannot(getattr(undone, "reason", "it cannot be undone"))
+    words = f"recovered by undoing {name} down to {undone.source.name}"
+    return Route(name, Scores(undone.source.law), words, theory, graph, grain, source=undone.source)
+
+
+def _by_filter(name: str, theory: Any, graph: Any, grain: float, system: Any) -> Route | Cannot:
+    from procgen.chance.laws import LAWS
+
+    # Rounding adds grain²/12, and so does spreading the rounded values over their cells.
+    kalman = _kalman(system, 0, grain * grain / 6)
+    if theory.mean(np.array([0])) is None:
+        return Cannot(theory.reason("mean") or "its mean is not known")
+    kalman.prepare(256)
+    if grain > COARSE * max(kalman.roots):
+        return Cannot(f"values are rounded to {grain:g}, too coarse for shocks of sd {max(kalman.roots):.3g}")
+    words = f"one-step prediction errors of {name} (Kalman filter)"
+    return Route(name, Scores(LAWS["normal"]()), words, theory, graph, grain, kalman)
+
+
+def _kalman(system: Any, row: int, rounding: float) -> Kalman:
+    q = system.loading @ system.noise @ system.loading.T
+    return Kalman(system.transition, q, system.observation[row], system.initial, rounding)
+
+
+@dataclass
+class Expected:
+    """Correlations of the shocks of two series: `at[lag]` is that of the first at t with the second at t - lag.
+
+    They hold from step `ready` on; `unknown` says why they are not known.
+    """
+
+    at: dict[int, float] = field(default_factory=dict)
+    ready: int = 0
+    unknown: str = ""
+
+
+def expected(a: Route, b: Route, space: Any) -> Expected:
+    """What theory says of the shocks of two series together."""
+    left, right = _sources(a, space), _sources(b, space)
+    if left is None or right is None:
+        return Expected(unknown="a source of theirs is not known to theory")
+    if not any(space.dependent(x, y) for x in left for y in right):
+        return Expected()
+    if a.kalman is None and b.kalman is None:
+        return Expected({0: space.normal_correlation(left[0], right[0])})
+    if a.kalman is not None and b.kalman is not None:
+        return _of_two_filters(a, b, space)
+    if a.kalman is None:
+        return _mirrored(_of_filter_and_source(b, left[0], space))
+    return _of_filter_and_source(a, right[0], space)
+
+
+def _sources(r: Route, space: Any) -> list[Any] | None:
+    if r.kalman is None:
+        return [space.sources[r.source.name]] if r.source.name in space.sources else None
+    return list(r.theory.expression.sources)
+
+
+def _mirrored(e: Expected) -> Expected:
+    return Expected({-lag: c for lag, c in e.at.items()}, e.ready, e.unknown)
+
+
+def _of_filter_and_source(a: Route, source: Any, space: Any) -> Expected:
+    """Innovations of `a` at t against the normal score of `source` at t - lag."""
+    system = a.theory.system()
+    filter_ = _kalman(system, 0, a.grain * a.grain / 6)
+    ready = filter_.prepare()
+    sds = np.sqrt(np.diag(system.noise))
+    shared = [space.normal_correlation(space.sources[name], source) for name in system.sources]
+    push = system.loading @ (sds * np.array(shared))
+    closed = filter_.a - np.outer(filter_.gains[-1], filter_.c)
+    at = {}
+    for lag in range(SPAN + 1):
+        at[lag] = float(filter_.c @ push) / filter_.roots[-1]
+        push = closed @ push
+    return Expected(at, ready)
+
+
+def _of_two_filters(a: Route, b: Route, space: Any) -> Expected:
+    """Both prediction errors in one joint state space; their covariance is followed until it settles."""
+    from procgen.theory.system import system_of
+    from procgen.theory.unknown import Unknown
+
+    try:
+        joint = system_of(space, (a.theory.expression.linear, b.theory.expression.linear))
+    except Unknown as unknown:
+        return Expected(unknown=unknown.reason)
+    if len(joint.initial) > LARGEST_STATE:
+        return Expected(unknown=f"their joint state has {len(joint.initial)} elements")
+    one, two = _kalman(joint, 0, a.grain * a.grain / 6), _kalman(joint, 1, b.grain * b.grain / 6)
+    steps = max(one.prepare(), two.prepare())
+    x, last = joint.initial, np.inf
+    for step in range(4 * steps + 200):
+        k, m = min(step, len(one.gains) - 1), min(step, len(two.gains) - 1)
+        roots = one.roots[k] * two.roots[m]
+        now = float(one.c @ x @ two.c) / roots if roots else 0.0
+        if step >= steps and abs(now - last) < 1e-10:
+            break
+        last = now
+        x = (one.a - np.outer(one.gains[k], one.c)) @ x @ (two.a - np.outer(two.gains[m], two.c)).T + one.q
+    at = {}
+    ahead, behind = x, x
+    for lag in range(SPAN + 1):
+        at[lag] = float(one.c @ ahead @ two.c) / roots
+        at[-lag] = float(one.c @ behind @ two.c) / roots
+        ahead = (one.a - np.outer(one.gains[-1], one.c)) @ ahead
+        behind = behind @ (two.a - np.outer(two.gains[-1], two.c)).T
+    return Expected(at, step)

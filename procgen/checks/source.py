@@ -1,0 +1,157 @@
+"""Where the values come from: an ensemble of ours, or a table of anyone's, as blocks in the order of their steps."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping
+from pathlib import Path
+from typing import Any, Protocol
+
+import numpy as np
+
+from procgen.checks.verdict import Check
+
+
+class Origin(Protocol):
+    """Values to be judged, and what is to be said of how they are stored."""
+
+    spec: Any
+    steps: int
+    rows: int
+    faults: list[Check]
+
+    def blocks(self) -> Iterator[tuple[int, int, Mapping[str, np.ndarray]]]: ...
+    def checks(self) -> list[Check]: ...
+    def about(self) -> dict[str, Any]: ...
+
+
+def origin(data: Any, spec: Any, columns: Mapping[str, str] | None) -> Origin:
+    """The origin behind whatever was given to `validate`; ValueError when nothing can be read from it."""
+    from procgen.checks.validate import read_spec
+
+    spec = read_spec(spec)
+    if isinstance(data, str | Path):
+        path = Path(data)
+        if path.is_dir():
+            from procgen.ensemble import open_ensemble
+
+            data = open_ensemble(path)
+        else:
+            from procgen.checks.foreign import read_table
+
+            _need_spec(spec, path)
+            return read_table(path, spec, columns)
+    if hasattr(data, "blocks") and hasattr(data, "whole"):
+        return EnsembleOrigin(data, spec)
+    if hasattr(data, "columns") and hasattr(data, "iloc"):
+        from procgen.checks.foreign import from_frame
+
+        _need_spec(spec, "the table")
+        return from_frame(data, spec, columns)
+    raise ValueError(f"expected an ensemble, a DataFrame, or the path of one, got {type(data).__name__}")
+
+
+def _need_spec(spec: Any, what: object) -> None:
+    if spec is None:
+        raise ValueError(f"{what} does not say what it should follow; give the spec (--spec SPEC)")
+
+
+class EnsembleOrigin:
+    """An ensemble of ours: its values are also held against the digests in its manifest."""
+
+    def __init__(self, ensemble: Any, spec: Any = None):
+        self.ensemble = ensemble
+        self.spec = ensemble.spec if spec is None else spec
+        self.steps, self.rows = ensemble.whole.steps, ensemble.whole.rows
+        self.faults: list[Check] = []
+        missing = [name for name in self.spec.series if name not in ensemble.names]
+        if missing:
+            raise ValueError(f"the ensemble has no series {', '.join(missing)}; it has {', '.join(ensemble.names)}")
+        self.names = list(self.spec.series)
+        self._nodes: list[tuple[Any, dict[str, Any]]] = []
+
+    def checks(self) -> list[Check]:
+        return []
+
+    def about(self) -> dict[str, Any]:
+        """Title, digest and size, for the report."""
+        whole = self.ensemble.whole
+        manifest = getattr(self.ensemble, "manifest", None)
+        return {
+            "title": self.spec.title,
+            "paths": whole.paths,
+            "steps": whole.steps,
+            "digest": manifest.digest if manifest is not None else None,
+            "spec_digest": self.spec.digest(),
+        }
+
+    def blocks(self) -> Iterator[tuple[int, int, Mapping[str, np.ndarray]]]:
+        """Blocks of the spec's series; parts that cannot be read become faults."""
+        manifest = getattr(self.ensemble, "manifest", None)
+        if manifest is None:
+            for first_path, first_step, values in self.ensemble.blocks():
+                yield first_path, first_step, {name: values[name] for name in self.names}
+            return
+        chains: dict[tuple[int, int], list[Any]] = {}
+        for part in manifest.parts:
+            chains.setdefault((part.block.first_path, part.block.end_path), []).append(part)
+        for (first, end), parts in chains.items():
+            yield from self._chain(first, end, parts)
+        self._compare_digests(manifest)
+
+    def _chain(self, first: int, end: int, parts: list[Any]) -> Iterator[tuple[int, int, Mapping[str, np.ndarray]]]:
+        """The parts of one range of paths, each gathered whole before it is handed on."""
+        from procgen.ensemble.errors import EnsembleError
+
+        pieces = self.ensemble.stored(first, end)
+        for part in parts:
+            try:
+                yield part.block.first_path, part.block.first_step, self._part(part, pieces)
+            except EnsembleError as error:
+                self.faults.append(Check.fact("", "rows in order", str(part.block), str(error)))
+                return
+
+    def _part(self, part: Any, pieces: Iterator[Any]) -> dict[str, np.ndarray]:
+        from procgen.ensemble import digest
+        from procgen.ensemble.columns import as_float
+
+        leaves = {name: digest.Leaves(part.block) for name in self.ensemble.names}
+        out = {name: np.empty((part.block.paths, part.block.steps)) for name in self.names}
+        left = part.block.rows
+        while left:
+            block, values = next(pieces)
+            left -= block.rows
+            rows = slice(block.first_path - part.block.first_path, block.end_path - part.block.first_path)
+            steps = slice(block.first_step - part.block.first_step, block.end_step - part.block.first_step)
+            for name, leaf in leaves.items():
+                numbers = as_float(values[name])
+                leaf.add(block.first_path, block.first_step, numbers)
+                if name in out:
+                    out[name][rows, steps] = numbers
+        whole = self.ensemble.manifest.whole
+        self._nodes.append((part, {name: leaf.nodes(whole) for name, leaf in leaves.items()}))
+        return out
+
+    def _compare_digests(self, manifest: Any) -> None:
+        """Every value is the one that was written, or the first place where it is not."""
+        from procgen.ensemble import check_digest, digest
+        from procgen.ensemble.manifest import node
+
+        good = len(self._nodes) == len(manifest.parts) and all(
+            node({name: digest.pack(each) for name, each in nodes.items()}) == part.node for part, nodes in self._nodes
+        )
+        if good:
+            blocks = [(part.block, nodes) for part, nodes in self._nodes]
+            good = all(
+                digest.root([(block, nodes[name]) for block, nodes in blocks], manifest.whole) == recorded
+                for name, recorded in {**manifest.stored, **manifest.revealed}.items()
+            )
+        if good:
+            note = f"every value is the one that was drawn ({manifest.digest[:12]}…)"
+            self.faults.append(Check.fact("", "rows in order", "all parts", "", "every path and step once, in order"))
+            self.faults.append(Check.fact("", "digest", "all parts", "", note))
+            return
+        result = check_digest(self.ensemble.path)
+        damages = result.damages or ("the values are not those that the manifest records",)
+        for damage in damages[:3]:
+            series = getattr(damage, "series", None) or ""
+            self.faults.append(Check.fact(series, "digest", "all parts", str(damage)))

@@ -1,0 +1,162 @@
+"""Facts about the values as they stand: finite, of the declared precision, and no path the copy of another."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
+
+from procgen.checks.verdict import Check
+
+_SAMPLE = 16  # paths of each tile whose bits are looked at for a detour through float32
+_CERTAIN = 1e-12  # expected number of equal pairs below which one equal pair is no chance
+
+
+@dataclass
+class Precision:
+    """What one series declares: `decimals` or None, its type, and whether chance moves it at all."""
+
+    name: str
+    type: str
+    decimals: int | None
+    random: bool
+
+
+@dataclass
+class Structure:
+    """Facts gathered along the pass, for all series together."""
+
+    series: Sequence[Precision]
+    not_finite: dict[str, list[int]] = field(default_factory=dict)  # series -> [count, path, step of the first]
+    off_grid: dict[str, list[int]] = field(default_factory=dict)
+    narrow: dict[str, list[int]] = field(default_factory=dict)  # series -> [values that fit float32, values]
+    prints: list[tuple[int, NDArray[np.uint64]]] = field(default_factory=list)  # (first path, (paths, series))
+
+    def absorb(self, column: int, x: NDArray, first_path: int, first_step: int, prints: NDArray[np.uint64]) -> bool:
+        """Look at a tile (steps, paths) of one series; `prints` (paths,) is updated. True when all is finite."""
+        what = self.series[column]
+        prints += fingerprint(x, first_step, column)
+        finite = bool(np.isfinite(x).all())
+        if not finite:
+            _note(self.not_finite, what.name, ~np.isfinite(x), first_path, first_step)
+        if what.decimals is not None and abs(what.decimals) <= 15:
+            scaled = x * 10.0**what.decimals
+            with np.errstate(invalid="ignore"):
+                off = np.abs(scaled - np.rint(scaled)) > 1e-9 + 4e-16 * np.abs(scaled)
+            if off.any():
+                _note(self.off_grid, what.name, off, first_path, first_step)
+        elif what.type != "int64" and what.random:
+            sample = x[:, :_SAMPLE]
+            with np.errstate(over="ignore", invalid="ignore"):
+                fits = int(np.count_nonzero(sample.astype(np.float32) == sample))
+            seen = self.narrow.setdefault(what.name, [0, 0])
+            seen[0] += fits
+            seen[1] += sample.size
+        return finite
+
+    def close(self, first_path: int, prints: NDArray[np.uint64]) -> None:
+        self.prints.append((first_path, prints))
+
+    def merge(self, other: Structure) -> None:
+        for mine, theirs in ((self.not_finite, other.not_finite), (self.off_grid, other.off_grid)):
+            for name, (count, path, step) in theirs.items():
+                old = mine.setdefault(name, [0, path, step])
+                mine[name] = [old[0] + count, *min((old[1], old[2]), (path, step))]
+        for name, (fits, seen) in other.narrow.items():
+            old = self.narrow.setdefault(name, [0, 0])
+            old[0] += fits
+            old[1] += seen
+        self.prints += other.prints
+
+    def checks(self, chance_of_equal: dict[str, float]) -> Iterator[Check]:
+        """The facts as checks; `chance_of_equal` gives the probability that two paths of a series are equal."""
+        for what in self.series:
+            yield self._finite(what.name)
+            yield self._precision(what)
+        if self.prints:
+            yield from self._copies(chance_of_equal)
+
+    def _finite(self, name: str) -> Check:
+        fault = ""
+        if name in self.not_finite:
+            count, path, step = self.not_finite[name]
+            fault = f"{count} value{'s are' if count > 1 else ' is'} not finite, the first at path {path}, step {step}"
+        return Check.fact(name, "finite values", "all steps", fault, "every value is a finite number")
+
+    def _precision(self, what: Precision) -> Check:
+        declared = what.type if what.decimals is None else f"{what.type}, {what.decimals} decimals"
+        fault = ""
+        if what.name in self.off_grid:
+            count, path, step = self.off_grid[what.name]
+            fault = (
+                f"{count} value{'s have' if count > 1 else ' has'} more than the {what.decimals} decimals declared, "
+                f"the first at path {path}, step {step}"
+            )
+        fits, seen = self.narrow.get(what.name, [0, 0])
+        if what.type == "float64" and seen >= 32 and fits > 0.9 * seen:
+            fault = "values went through float32 (all fit in it), where float64 is declared"
+        if what.type == "float32" and fits < seen:
+            fault = "values are finer than float32, which is declared"
+        return Check.fact(what.name, "precision", "all steps", fault, f"as declared: {declared}")
+
+    def _copies(self, chance_of_equal: dict[str, float]) -> Iterator[Check]:
+        prints = np.concatenate([rows for _, rows in sorted(self.prints, key=lambda item: item[0])])
+        paths = np.concatenate(
+            [first + np.arange(len(rows)) for first, rows in sorted(self.prints, key=lambda item: item[0])]
+        )
+        if len(paths) < 2:
+            return
+        for column, what in enumerate(self.series):
+            if not what.random:
+                continue
+            copies, first, second = _equal(prints[:, column], paths)
+            expected = chance_of_equal.get(what.name, 0.0) * math.comb(len(paths), 2)
+            if copies and expected > _CERTAIN:
+                note = f"{copies} equal paths, but rounding makes some {expected:.2g} pairs equal by chance"
+                yield Check(what.name, "copied paths", "all pairs", "structure", outcome="untestable", note=note)
+                continue
+            fault = ""
+            if copies:
+                many = f"{copies} paths repeat another one" if copies > 1 else "one path repeats another one"
+                fault = f"{many} bit for bit, such as paths {first} and {second}"
+            yield Check.fact(what.name, "copied paths", "all pairs", fault, "no two paths are the same")
+
+
+def _note(book: dict[str, list[int]], name: str, where: NDArray, first_path: int, first_step: int) -> None:
+    path, step = (int(k) for k in np.argwhere(where.T)[0])
+    place = (first_path + path, first_step + step)
+    old = book.setdefault(name, [0, *place])
+    book[name] = [old[0] + int(np.count_nonzero(where)), *min((old[1], old[2]), place)]
+
+
+def _equal(prints: NDArray, paths: NDArray) -> tuple[int, int, int]:
+    """How many paths repeat an earlier one, and the first such pair."""
+    order = np.argsort(prints, kind="stable")
+    same = prints[order][1:] == prints[order][:-1]
+    if not same.any():
+        return 0, -1, -1
+    at = np.flatnonzero(same)
+    second = at[np.argmin(paths[order[at + 1]])] + 1
+    return int(same.sum()), int(paths[order[second - 1]]), int(paths[order[second]])
+
+
+def fingerprint(x: NDArray, first_step: int, column: int) -> NDArray[np.uint64]:
+    """A 64-bit sum (paths,) over the bits of a tile (steps, paths): equal for equal paths, and it adds over tiles."""
+    bits = np.ascontiguousarray(x, dtype=np.float64).view(np.uint64)
+    weights = _odd(np.arange(first_step, first_step + len(x), dtype=np.uint64), column)
+    total = np.zeros(x.shape[1], dtype=np.uint64)
+    for start in range(0, len(x), 64):
+        part = bits[start : start + 64]
+        mixed = part ^ (part >> np.uint64(32))
+        total += (mixed * weights[start : start + 64, None]).sum(axis=0, dtype=np.uint64)
+    return total
+
+
+def _odd(step: NDArray[np.uint64], column: int) -> NDArray[np.uint64]:
+    x = step * np.uint64(0x9E3779B97F4A7C15) + np.uint64((column + 1) * 0x632BE59BD9B4E019 % 2**64)
+    x = (x ^ (x >> np.uint64(30))) * np.uint64(0xBF58476D1CE4E5B9)
+    x = (x ^ (x >> np.uint64(27))) * np.uint64(0x94D049BB133111EB)
+    return (x ^ (x >> np.uint64(31))) | np.uint64(1)

@@ -1,0 +1,196 @@
+"""`validate`: does an ensemble have the behaviour that its spec states?"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Iterable, Iterator, Mapping
+from itertools import combinations
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from procgen.checks.gather import Gather, Plan
+from procgen.checks.judge_moments import cross_moments, moment_checks
+from procgen.checks.judge_shocks import cross_checks, shock_checks
+from procgen.checks.probes import PAIR_LIMIT, SeriesPlan, plan_cross, plan_series
+from procgen.checks.recover import Cannot, Expected, Route, expected, route
+from procgen.checks.structure import Precision
+from procgen.checks.verdict import Check, Verdict
+
+Tick = Callable[[int, int], None]
+Blocks = Iterable[tuple[int, int, Mapping[str, np.ndarray]]]
+
+
+def validate(
+    data: Any,
+    spec: Any = None,
+    false_alarm: float = 0.001,
+    columns: Mapping[str, str] | None = None,
+    progress: Tick | None = None,
+) -> Verdict:
+    """A verdict on whether `data` behaves as the spec states.
+
+    Parameters
+    ----------
+    data : Ensemble, DataFrame, or path
+        An ensemble (or its folder), or anyone's long table: a DataFrame, a CSV or a Parquet file.
+    spec : Spec or path, optional
+        What the data should follow; an ensemble knows its own.
+    false_alarm : float in (0, 1)
+        Probability, at most, with which data of exactly the stated behaviour are said to depart.
+    columns : mapping, optional
+        For a table: where "path", "step" or "time", and each series are found, e.g. {"path": "run", "x": "value"}.
+    progress : callable, optional
+        Called with (rows done, rows in all).
+
+    Raises
+    ------
+    ValueError
+        When the data cannot be read, or there is no spec to compare them with.
+    """
+    from procgen.checks import source
+
+    if not 0 < false_alarm < 1:
+        raise ValueError(f"expected a false-alarm probability between 0 and 1, got {false_alarm}")
+    origin = source.origin(data, spec, columns)
+    plan = plan_of(origin.spec, origin.steps)
+    gather, faults = _pass(plan, origin, progress)
+    rows = [*origin.checks(), *faults, *judged(gather)]
+    return Verdict(rows, false_alarm, origin.about())
+
+
+def _pass(plan: Plan, origin: Any, progress: Tick | None) -> tuple[Gather, list[Check]]:
+    gather = Gather(plan)
+    done = 0
+    for first_path, first_step, values in origin.blocks():
+        gather.absorb(first_path, first_step, values)
+        if progress is not None:
+            done += values[plan.names[0]].size
+            progress(done, origin.rows)
+    gather.finish()
+    return gather, origin.faults
+
+
+def plan_of(spec: Any, steps: int | None = None) -> Plan:
+    """Everything that the pass over the data must know, from the spec's theory."""
+    from procgen.terms.graph import build
+    from procgen.theory.series import theory
+
+    graph = build(spec)
+    th = theory(spec, graph)
+    steps = steps or spec.time.steps
+    series, routes, precision = [], {}, []
+    for name, declared in spec.series.items():
+        grain = grain_of(declared, th[name], steps)
+        plan = plan_series(name, th[name], steps, grain, _periods(graph, name))
+        way = route(name, th[name], graph, grain)
+        series.append(plan)
+        routes[name] = way
+        precision.append(Precision(name, declared.type, declared.decimals, bool(th[name].expression.sources)))
+    ways = [way for way in routes.values() if isinstance(way, Route)]
+    pairs = {(a.series, b.series): expected(a, b, th.axis.space) for a, b in list(combinations(ways, 2))[:PAIR_LIMIT]}
+    return Plan(steps, series, precision, plan_cross(series, th.cross), routes, pairs)
+
+
+def grain_of(declared: Any, theory: Any, steps: int) -> float:
+    """The distance of neighbouring values as stored: of decimals, whole numbers, or float32."""
+    if declared.decimals is not None or declared.type == "int64":
+        return 10.0 ** -(declared.decimals or 0)
+    if declared.type == "float32":
+        at = np.array([0, steps // 2, steps - 1])
+        mean, variance = theory.mean(at), theory.variance(at)
+        reach = np.abs(mean if mean is not None else 1.0) + 3 * np.sqrt(variance if variance is not None else 1.0)
+        return float(np.spacing(np.float32(np.max(reach))))
+    return 0.0
+
+
+def _periods(graph: Any, name: str) -> list[int]:
+    """Whole periods of the seasonal terms of a series."""
+    found = []
+    for node in graph.order([graph.series[name]]):
+        period = getattr(node, "term", None) and node.term.values.get("period")
+        if period and float(period).is_integer():
+            found.append(int(period))
+    return found
+
+
+def judged(gather: Gather) -> Iterator[Check]:
+    """All checks of what one pass has gathered."""
+    plan = gather.plan
+    yield from gather.structure.checks({p.name: _chance_of_equal(p, plan) for p in plan.series})
+    for column, series in enumerate(plan.series):
+        if not plan.precision[column].random:
+            yield _known(gather, series)
+            continue
+        yield from moment_checks(gather, column)
+        yield from _shocks(gather, series.name)
+    for place in range(len(plan.cross)):
+        yield from cross_moments(gather, place)
+    for pair, sums in gather.cross.items():
+        name, stated = " ~ ".join(pair), plan.shock_pairs[pair]
+        if stated.unknown:
+            yield Check(
+                name, "shocks: correlation between series", "", "dependence", outcome="untestable", note=stated.unknown
+            )
+        else:
+            yield from cross_checks(name, sums, stated.at)
+
+
+def _known(gather: Gather, series: SeriesPlan) -> Check:
+    """A series without chance must be its mean."""
+    if series.mean is None:
+        return Check(series.name, "values", "all steps", "level", outcome="untestable", note=series.reason("mean"))
+    gap = gather.gaps.get(series.name, 0.0)
+    scale = float(np.max(np.abs(series.mean)))
+    room = series.grain / 2 + 1e-9 * max(scale, 1e-300)
+    fault = (
+        "" if gap <= room else f"values are up to {gap:.4g} away from the known ones, without any chance in the spec"
+    )
+    check = Check.fact(series.name, "values", "all steps", fault, "every value is the known one")
+    check.kind, check.theory, check.estimate = "level", 0.0, gap
+    return check
+
+
+def _shocks(gather: Gather, name: str) -> Iterator[Check]:
+    way = gather.plan.routes[name]
+    if isinstance(way, Cannot):
+        yield Check(name, "recovered shocks", "all steps", "law", outcome="untestable", note=str(way))
+        return
+    sums = gather.shocks[name]
+    noise = gather.noise.get(name, 0.0)
+    if sums.n and noise > 0.1 * math.sqrt(2 / sums.n):
+        note = f"stored rounding moves the shocks by {math.sqrt(noise):.2g} of their sd, too much for {sums.n} of them"
+        yield Check(name, "recovered shocks", "all steps", "law", outcome="untestable", note=note)
+        return
+    yield from shock_checks(name, sums, way.words)
+
+
+def _chance_of_equal(series: SeriesPlan, plan: Plan) -> float:
+    """Probability that two paths of a series are equal by rounding; 0 where values are not rounded."""
+    if series.variance is None or not np.isfinite(series.variance).all():
+        return 0.0
+    moving = int(np.count_nonzero(series.variance > 0))
+    if series.grain == 0.0:
+        return 0.0 if moving else 1.0
+    way = plan.routes[series.name]
+    sd = math.sqrt(float(series.variance.max()))
+    if isinstance(way, Route) and way.kalman is not None:
+        sd = min(sd, way.kalman.roots[-1])
+        moving = plan.steps - 1 if moving < len(series.steps) else plan.steps
+    # Two normals of this sd fall in one cell with probability grain / (2 sqrt(pi) sd).
+    return min(1.0, series.grain / (2 * math.sqrt(math.pi) * sd)) ** max(moving, 1) if sd else 1.0
+
+
+def read_spec(spec: Any) -> Any:
+    """A Spec, from itself or from the path of its file."""
+    if isinstance(spec, str | Path):
+        from procgen.chance.laws import LAWS
+        from procgen.spec.reader import read_file
+        from procgen.terms import catalogue
+
+        return read_file(spec, catalogue(), LAWS)
+    return spec
+
+
+__all__ = ["Expected", "plan_of", "read_spec", "validate"]
