@@ -12,10 +12,15 @@ in Demeure & Mullis (1989), IEEE Trans. ASSP 37, 1226-1230.
 
 from __future__ import annotations
 
+from fractions import Fraction
 from functools import lru_cache
 
 import numpy as np
 
+from procgen.theory.unknown import Unknown
+
+WORST = 1e6  # condition number from which a small system is solved in rational numbers
+LARGEST_RATIONAL = 24
 LONGEST_RECURSION = 1 << 21  # beyond this lag single values come from powers of the companion matrix
 
 
@@ -118,8 +123,31 @@ def _split(a: np.ndarray, b: np.ndarray) -> tuple[np.ndarray, np.ndarray, float]
     # One refinement with a long residual: it costs a product and removes most of the error of elimination.
     residual = one - system.astype(np.longdouble) @ solution.astype(np.longdouble)
     solution = solution + lu_solve(factors, residual.astype(float))
-    inverse_condition = lapack.dgecon(factors[0], np.abs(system).sum(axis=0).max())[0]
-    return solution[: ahead + 1], np.concatenate([[0.0], solution[ahead + 1 :]]), 1.0 / inverse_condition
+    inverse = lapack.dgecon(factors[0], np.abs(system).sum(axis=0).max())[0]
+    condition = 1.0 / inverse if inverse > 0.0 else np.inf
+    if condition > WORST:
+        if size > LARGEST_RATIONAL:
+            raise Unknown(f"its coefficients are too near to a unit root (condition number {condition:.1g})")
+        solution = _rational_solution(system, one)
+    return solution[: ahead + 1], np.concatenate([[0.0], solution[ahead + 1 :]]), condition
+
+
+def _rational_solution(system: np.ndarray, right: np.ndarray) -> np.ndarray:
+    """The solution in exact rational arithmetic, rounded once; for a small system near a unit root."""
+    rows = [[Fraction(x) for x in (*row, b)] for row, b in zip(system.tolist(), right.tolist(), strict=True)]
+    size = len(rows)
+    for i in range(size):
+        pivot = next((r for r in range(i, size) if rows[r][i]), None)
+        if pivot is None:
+            raise Unknown("its coefficients have a root on the unit circle")
+        rows[i], rows[pivot] = rows[pivot], rows[i]
+        scale = rows[i][i]
+        rows[i] = [x / scale for x in rows[i]]
+        for r in range(size):
+            if r != i and rows[r][i]:
+                factor = rows[r][i]
+                rows[r] = [x - factor * y for x, y in zip(rows[r], rows[i], strict=True)]
+    return np.array([float(row[-1]) for row in rows])
 
 
 def spectral_radius(phi: tuple[float, ...]) -> float:

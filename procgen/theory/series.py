@@ -20,6 +20,8 @@ from procgen.theory.verdict import Stationarity, judge
 
 WORTH_SAYING = 1e-9 / (100 * np.finfo(float).eps)  # a condition number above this weakens the promised 1e-9
 
+OVERFLOW = "it is too large for double precision at a step that is asked for"
+
 
 class SeriesTheory:
     """Exact moments of one series. Every unknown number is None, and `reason(name)` says why.
@@ -34,7 +36,7 @@ class SeriesTheory:
 
     def mean(self, steps) -> np.ndarray | None:
         """E x at steps."""
-        return self._try("mean", lambda: self.expression.mean(_steps(steps)))
+        return self._try("mean", lambda: _mean(self.expression, steps))
 
     def variance(self, steps) -> np.ndarray | None:
         """Var x at steps."""
@@ -154,6 +156,9 @@ class SeriesTheory:
         except Unknown as unknown:
             self._reasons[name] = unknown.reason
             return None
+        if isinstance(value, np.ndarray) and not np.isfinite(value).all():
+            self._reasons[name] = OVERFLOW
+            return None
         self._reasons.pop(name, None)
         return value
 
@@ -168,11 +173,11 @@ class CrossTheory:
     def covariance(self, t, s) -> np.ndarray | None:
         """Cov(first(t), second(s)); t and s broadcast against each other; None with `reason` where unknown."""
         try:
-            self._reason = None
-            return _cov(self.first.expression, self.second.expression, t, s)
+            value = _cov(self.first.expression, self.second.expression, t, s)
+            self._reason = None if np.isfinite(value).all() else OVERFLOW
         except Unknown as unknown:
             self._reason = unknown.reason
-            return None
+        return value if self._reason is None else None
 
     def correlation(self, t, s) -> np.ndarray | None:
         """The same, divided by both standard deviations."""
@@ -314,10 +319,16 @@ def _steps(steps) -> np.ndarray:
     return steps.astype(np.int64)
 
 
+def _mean(x: Expression, steps) -> np.ndarray:
+    with np.errstate(over="ignore", invalid="ignore", under="ignore"):
+        return x.mean(_steps(steps))
+
+
 def _cov(x: Expression, y: Expression, t, s) -> np.ndarray:
     t, s = (steps.copy() for steps in np.broadcast_arrays(_steps(t), _steps(s)))
-    return x.covariance(y, t, s)
+    with np.errstate(over="ignore", invalid="ignore", under="ignore"):
+        return x.covariance(y, t, s)
 
 
 def _plain(values: np.ndarray | None) -> list | None:
-    return None if values is None else [v if np.isfinite(v) else None for v in np.asarray(values, float).tolist()]
+    return None if values is None else np.asarray(values, float).tolist()

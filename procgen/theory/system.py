@@ -20,9 +20,12 @@ from procgen.theory.sources import Source, Space
 from procgen.theory.unknown import Unknown
 
 LARGEST_STATE = 1500
-MANY = 128  # from so many distinct steps on, responses are cheaper than doubling
+MANY = 128  # from so many distinct gaps on, a table of responses is cheaper than powers
+OVERHEAD = 20_000  # of a few small array operations, in multiplications
 LONGEST_RESPONSE = 50_000_000  # numbers in a table of responses
 SETTLED = 1e-15  # relative distance from its limit at which a variance path counts as constant
+
+Distinct = tuple[np.ndarray, np.ndarray]
 
 
 @dataclass
@@ -53,23 +56,22 @@ class System:
 
     def _ordered(self, late: int, early: int, steps: np.ndarray, gaps: np.ndarray) -> np.ndarray:
         """Cov(y_late(step + gap), y_early(step))."""
-        distinct = np.unique(steps)
-        longest = int(steps.max() + gaps.max()) + 1
-        affordable = longest * len(self.transition) <= LONGEST_RESPONSE
-        few_gaps = len(np.unique(gaps)) <= len(distinct)
-        if self.noise_path is None and len(distinct) > MANY and few_gaps and affordable:
-            return self._by_responses(late, early, steps, gaps)
-        return self._by_marching(late, early, steps, gaps)
+        at, gap_at = _distinct(steps), _distinct(gaps)
+        size, longest = len(self.transition), int(at[0][-1] + gap_at[0][-1]) + 1
+        marching = len(at[0]) * (4 * size**3 + OVERHEAD)
+        responding = longest * 2 * size**2 + len(gap_at[0]) * (longest * (size + len(self.noise)) + OVERHEAD)
+        if self.noise_path is None and responding < marching and longest * size <= LONGEST_RESPONSE:
+            return self._by_responses(late, early, steps, gap_at)
+        return self._by_marching(late, early, at, gap_at)
 
-    def _by_marching(self, late: int, early: int, steps: np.ndarray, gaps: np.ndarray) -> np.ndarray:
-        rows, where = self._rows(self.observation[late], gaps)
-        distinct, at = np.unique(steps, return_inverse=True)
-        seen = np.empty((len(distinct), len(self.initial)))
+    def _by_marching(self, late: int, early: int, at: Distinct, gap_at: Distinct) -> np.ndarray:
+        rows = self._rows(self.observation[late], gap_at[0])
+        seen = np.empty((len(at[0]), len(self.initial)))
         now, p = 0, self.initial
-        for k, step in enumerate(distinct.tolist()):
+        for k, step in enumerate(at[0].tolist()):
             p = self._advance(p, now, step)
             seen[k], now = p @ self.observation[early], step
-        return np.einsum("pi,pi->p", rows[where], seen[at])
+        return np.einsum("pi,pi->p", rows[gap_at[1]], seen[at[1]])
 
     def _advance(self, p: np.ndarray, now: int, step: int) -> np.ndarray:
         while self.noise_path is not None and now < step:
@@ -101,20 +103,19 @@ class System:
                 self._table.append((power @ power, gathered + power @ gathered @ power.T))
         return self._table[k]
 
-    def _rows(self, row: np.ndarray, gaps: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-        """row A^gap for the distinct gaps, and which of them each gap is."""
-        distinct, where = np.unique(gaps, return_inverse=True)
-        if len(distinct) > MANY and (distinct[-1] + 1) * len(row) <= LONGEST_RESPONSE:
-            return self._responses(row, int(distinct[-1]) + 1)[distinct], where
-        rows, now = np.empty((len(distinct), len(row))), 0
-        for k, gap in enumerate(distinct.tolist()):
+    def _rows(self, row: np.ndarray, gaps: np.ndarray) -> np.ndarray:
+        """row A^gap for ascending gaps."""
+        if len(gaps) > MANY and (gaps[-1] + 1) * len(row) <= LONGEST_RESPONSE:
+            return self._responses(row, int(gaps[-1]) + 1)[gaps]
+        rows, now = np.empty((len(gaps), len(row))), 0
+        for k, gap in enumerate(gaps.tolist()):
             left, bit, now = gap - now, 0, gap
             while left:
                 if left & 1:
                     row = row @ self._doubled(bit)[0]
                 left, bit = left >> 1, bit + 1
             rows[k] = row
-        return rows, where
+        return rows
 
     def _responses(self, row: np.ndarray, count: int) -> np.ndarray:
         """row A^j for j < count, twice as many at a time."""
@@ -124,20 +125,30 @@ class System:
             k += 1
         return rows
 
-    def _by_responses(self, late: int, early: int, steps: np.ndarray, gaps: np.ndarray) -> np.ndarray:
+    def _by_responses(self, late: int, early: int, steps: np.ndarray, gap_at: Distinct) -> np.ndarray:
+        """Squares of responses added up: all steps of a gap at once."""
+        gaps, which = gap_at
         last = int(steps.max()) + 1
-        ahead = self._responses(self.observation[late], last + int(gaps.max()))
+        ahead = self._responses(self.observation[late], last + int(gaps[-1]))
         behind = self._responses(self.observation[early], last)
         psi_ahead, psi_behind = ahead @ self.loading @ self.noise, behind @ self.loading
         kept = ahead @ self.initial
+        order = np.argsort(which, kind="stable")
         out = np.empty(steps.shape)
-        for gap in np.unique(gaps).tolist():
-            chosen = gaps == gap
+        for gap, chosen in zip(gaps.tolist(), np.split(order, np.cumsum(np.bincount(which))[:-1]), strict=True):
             products = np.einsum("tm,tm->t", psi_ahead[gap : gap + last], psi_behind)
             gathered = np.concatenate([[0.0], np.cumsum(products)])[steps[chosen]]
-            start = np.einsum("ti,ti->t", kept[gap + steps[chosen]], behind[steps[chosen]])
-            out[chosen] = gathered + start
+            out[chosen] = gathered + np.einsum("ti,ti->t", kept[gap + steps[chosen]], behind[steps[chosen]])
         return out
+
+
+def _distinct(values: np.ndarray) -> Distinct:
+    """The distinct values, ascending, and which of them each is; by a table while that is small."""
+    if values.max() > 4 * len(values) + 65_536:
+        return np.unique(values, return_inverse=True)
+    present = np.zeros(int(values.max()) + 1, bool)
+    present[values] = True
+    return np.flatnonzero(present), (np.cumsum(present) - 1)[values]
 
 
 def system_of(space: Space, forms: Sequence[Linear]) -> System:
