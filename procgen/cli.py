@@ -62,13 +62,14 @@ def render(
     scheduler: Annotated[str, typer.Option(metavar="local", help="Who draws: this machine.")] = "local",
 ) -> None:
     """Draw paths of SPEC into the folder OUT: Parquet parts and manifest.json."""
-    from procgen import api
+    import procgen as pg
+    from procgen.report.rendered import rendered
 
     if scheduler != "local":
         raise typer.BadParameter(f"expected local, got {scheduler!r}", param_hint="--scheduler")
-    loaded = api.load(spec)
+    loaded = pg.load(spec)
     with progress("drawing") as tick:
-        ensemble = api.render(
+        ensemble = pg.render(
             loaded,
             out,
             paths=paths,
@@ -82,7 +83,7 @@ def render(
             overwrite=overwrite,
             progress=tick,
         )
-    printed(api.summary(ensemble))
+    printed(rendered(ensemble))
 
 
 @app.command(
@@ -109,12 +110,12 @@ def validate(
 
     Ends with exit code 0 when they agree, 1 when they depart, 2 when it cannot be judged.
     """
-    from procgen import api
+    import procgen as pg
 
+    columns = {role: name for role, name in (("path", path_col), ("step", step_col)) if name is not None}
+    stated = None if spec is None else pg.load(spec)
     with progress("reading") as tick:
-        verdict = api.validate(
-            data, spec=spec, path_col=path_col, step_col=step_col, false_alarm=false_alarm, progress=tick
-        )
+        verdict = pg.validate(data, stated, false_alarm, columns or None, tick)
     if report is not None:
         verdict.to_html(report)
     printed(verdict.to_json() if json else verdict.to_text())
@@ -138,9 +139,11 @@ def theory(
     ] = 40,
 ) -> None:
     """Print what SPEC implies: equations, stationarity, means, variances, autocovariances."""
-    from procgen import api
+    import procgen as pg
+    from procgen.report.theory import theory_json, theory_text
 
-    printed(api.theory_report(api.load(spec), at=at, lags=lags, json=json))
+    loaded = pg.load(spec)
+    printed((theory_json if json else theory_text)(loaded, pg.theory(loaded), at, lags))
 
 
 @app.command(
@@ -175,10 +178,10 @@ def digest(
 
     Ends with exit code 0 when they agree, 1 when they differ, 2 when OUT cannot be read.
     """
-    from procgen import api
+    from procgen.ensemble import check_digest
 
     with progress("reading") as tick:
-        result = api.digest(out, expect=expect, redraw=redraw, progress=tick)
+        result = check_digest(out, expect=expect, redraw=redraw, progress=tick)
     printed(result.text())
     raise typer.Exit(0 if result.ok else 1)
 

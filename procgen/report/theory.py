@@ -1,0 +1,128 @@
+"""The theory of a spec as text and as JSON: what `procgen theory` prints."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Iterable, Sequence
+from textwrap import wrap
+from typing import Any
+
+from procgen.report.equations import equations
+from procgen.spec.model import Spec
+from procgen.theory import SeriesTheory, Theory
+
+WIDTH = 100
+MEMORY = ("autocovariance", "autocorrelation")
+WANTED = ("mean", "variance", "autocovariance")  # reasons of others are told for stationary series only
+
+
+def theory_json(spec: Spec, theory: Theory, at: Sequence[int] | None, lags: int) -> str:
+    """All moments as JSON, at the steps `at` and up to the lag `lags`."""
+    return json.dumps(theory.as_dict(at or some(spec.time.steps), lags), ensure_ascii=False)
+
+
+def theory_text(spec: Spec, theory: Theory, at: Sequence[int] | None, lags: int) -> str:
+    """Equations, verdicts and moments, for a person to read."""
+    told = theory.as_dict(at or some(spec.time.steps), [0, *some(lags + 1)[1:]])
+    lines = [head(spec), *equations(spec, WIDTH)]
+    for name, facts in told["series"].items():
+        lines += ["", *_series(theory[name], facts, spec.series[name].unit)]
+    lines += _cross(told["cross"]) + _correlated(told["correlation"])
+    return "\n".join(lines)
+
+
+def some(count: int) -> list[int]:
+    """0, 1, 2, 5, 10, 20, 50, … below `count`, and the last before it; eight at most."""
+    ladder = [k * 10**e for e in range(13) for k in (1, 2, 5) if k * 10**e < count - 1]
+    return sorted({0, *ladder[:: max(1, -(-len(ladder) // 6))], count - 1})
+
+
+def head(spec: Spec) -> str:
+    """Title, size, seed and time in two lines."""
+    grid = spec.time
+    size = f"{spec.paths:,} paths × {grid.steps:,} steps"
+    if grid.every:
+        size += f" of {grid.every[0]} {grid.every[1]}"
+    if grid.start:
+        size += f" from {grid.start:%Y-%m-%d %H:%M} ({grid.zone or 'UTC'})"
+    return "\n".join([*([spec.title] if spec.title else []), f"{size}, seed {spec.seed}"])
+
+
+def _series(theory: SeriesTheory, facts: dict[str, Any], unit: str | None) -> list[str]:
+    lines = [f"{theory.name}{f' ({unit})' if unit else ''}: {facts['stationarity']['verdict']}"]
+    lines += _wrapped(facts["stationarity"]["reasons"])
+    lines += _table("step", facts["steps"], [("mean", facts["mean"]), ("variance", facts["variance"])])
+    lines += _memory(theory, facts["steps"], facts["autocovariance"]["lags"])
+    if facts["excess_kurtosis"] is not None and abs(facts["excess_kurtosis"]) > 1e-12:
+        lines.append(f"  excess kurtosis {number(facts['excess_kurtosis'])}")
+    elif facts["gaussian"] and any(facts["variance"] or []):
+        lines.append("  jointly Gaussian")
+    lines += _wrapped(_unknown(facts))
+    if "condition" in facts:
+        lines.append(f"  condition number {facts['condition']:.2g}: expect relative errors of 1e-16 times that")
+    return lines
+
+
+def _memory(theory: SeriesTheory, steps: Sequence[int], lags: Sequence[int]) -> list[str]:
+    """Autocovariances from step 0, or from the middle of the steps shown where they change with the step."""
+    start = 0 if theory.stationarity.covariance_stationary else steps[len(steps) // 2]
+    found = (theory.autocovariance(lags, start), theory.autocorrelation(lags, start))
+    rows = [(name, None if v is None else v.tolist()) for name, v in zip(MEMORY, found, strict=True)]
+    return _table("lag" if start == 0 else f"lag, from step {start}", lags, rows)
+
+
+def _unknown(facts: dict[str, Any]) -> list[str]:
+    """Why numbers are missing, those with one reason together."""
+    by_reason: dict[str, list[str]] = {}
+    for what, why in facts.get("unknown", {}).items():
+        if what in WANTED or "stationary" in facts["stationarity"]["verdict"]:
+            by_reason.setdefault(why, []).append(what.replace("_", " "))
+    return [f"{', '.join(names)} unknown: {why}" for why, names in by_reason.items()]
+
+
+def _table(head: str, columns: Sequence[int], rows: Sequence[tuple[str, list | None]]) -> list[str]:
+    """Rows of numbers under their steps or lags; what is unknown altogether is left out."""
+    known = [(name, [number(v) for v in values]) for name, values in rows if values is not None]
+    if not known:
+        return []
+    wide = max(len(head), *(len(name) for name, _ in known)) + 2
+    cells = [[str(c), *(values[i] for _, values in known)] for i, c in enumerate(columns)]
+    sizes = [max(map(len, column)) + 2 for column in cells]
+    names = [head, *(name for name, _ in known)]
+    return [
+        "  " + name.ljust(wide) + "".join(cells[i][j].rjust(sizes[i]) for i in range(len(cells)))
+        for j, name in enumerate(names)
+    ]
+
+
+def _cross(entries: Iterable[dict[str, Any]]) -> list[str]:
+    lines: list[str] = []
+    for entry in entries:
+        lines += ["", f"{entry['series'][0]} with {entry['series'][1]}"]
+        if "reason" in entry:
+            lines += _wrapped([f"covariance unknown: {entry['reason']}"])
+            continue
+        rows = [("covariance", entry["covariance"]), ("correlation", entry["correlation"])]
+        lines += _table("step", entry["steps"], rows)
+    return lines
+
+
+def _correlated(entries: Iterable[dict[str, Any]]) -> list[str]:
+    lines: list[str] = []
+    for entry in entries:
+        values = entry["values"]
+        implied = (
+            f"of the values {number(values)}" if values is not None else f"of the values unknown: {entry['reason']}"
+        )
+        text = f"{entry['leader']} leads {entry['follower']}: correlation of the normals {number(entry['normals'])}, "
+        lines += _wrapped([text + implied])
+    return ["", "shocks that go together", *lines] if lines else []
+
+
+def _wrapped(texts: Iterable[str]) -> list[str]:
+    return [line for text in texts for line in wrap(text, WIDTH, initial_indent="  ", subsequent_indent="    ")]
+
+
+def number(x: float | None) -> str:
+    """Six significant digits; a dash for what is not known."""
+    return "–" if x is None else f"{0.0 if abs(x) < 1e-300 else x:.6g}".replace("-", "−")
