@@ -169,7 +169,8 @@ def _proper(tree: Tree, rows: Rows, count: int, reader: Reading) -> bool:
     """Return whether rows are a correlation matrix for `count` names, after reporting why not."""
     widths = {len(row) for row in rows}
     if len(rows) != count or widths != {count}:
-        given = f"{len(rows)} rows of {' or '.join(map(str, sorted(widths)))}"
+        noun = "row" if len(rows) == 1 else "rows"
+        given = f"{len(rows)} {noun} of {' or '.join(map(str, sorted(widths)))}" if rows else "no rows"
         reader.fault(tree, f"expected {count} rows of {count} for {count} names, got {given}")
         return False
     for i in range(count):

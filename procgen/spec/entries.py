@@ -135,8 +135,9 @@ class _Terms:
             entry = tree.is_map and "of" not in tree.value and any(k in self.reader.catalogue for k in tree.value)
             short = "of" if entry or not tree.is_map else None
         else:
-            short = None if tree.is_map else self.kind.short
-        if short is None or tree.value is None:
+            rate = tree.is_map and set(tree.value) == {"value", "per"}
+            short = None if tree.is_map and not rate else self.kind.short
+        if short is None:
             return tree
         return Tree({short: tree}, tree.place, {short: tree})
 

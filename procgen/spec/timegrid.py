@@ -131,7 +131,7 @@ def _start(tree: Tree, grid: Grid, moment: datetime, reader: Reading) -> Grid | 
         return None
     if (year := placed.last_year()) > LAST_YEAR:
         message = f"expected steps that end by the year {LAST_YEAR}, but the last of {grid.steps:,} would be in "
-        reader.fault(tree.value["steps"], f"{message}{year:,}; give fewer or shorter steps, or leave out start")
+        reader.fault(tree.value["steps"], f"{message}{year}; give fewer or shorter steps, or leave out start")
         return None
     return placed
 

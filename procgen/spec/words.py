@@ -23,7 +23,9 @@ def nearest(given: object, names: Iterable[str]) -> str | None:
     """Return the nearest of `names` to a misspelt one, or None."""
     if not isinstance(given, str) or len(given) > 100:
         return None
-    return next(iter(difflib.get_close_matches(given, list(names), n=1, cutoff=0.6)), None)
+    names = list(names)
+    swapped = [name for name in names if sorted(name) == sorted(given)]
+    return next(iter(swapped or difflib.get_close_matches(given, names, n=1, cutoff=0.6)), None)
 
 
 def one_of(words: Iterable[str]) -> str:
@@ -38,14 +40,23 @@ def bounds(above: float | None, below: float | None, at_least: float | None, at_
     """Return bounds in words that follow "a number", such as " above 0" or " in (0, 1]"."""
     low = above if above is not None else at_least
     high = below if below is not None else at_most
+    if low is not None and low == high:
+        return f" equal to {_figure(low)}"
     if low is not None and high is not None:
         left, right = "(" if above is not None else "[", ")" if below is not None else "]"
-        return f" in {left}{low:g}, {high:g}{right}"
+        return f" in {left}{_figure(low)}, {_figure(high)}{right}"
     if low is not None:
-        return f" above {low:g}" if above is not None else f" of at least {low:g}"
+        return f" above {_figure(low)}" if above is not None else f" of at least {_figure(low)}"
     if high is not None:
-        return f" below {high:g}" if below is not None else f" of at most {high:g}"
+        return f" below {_figure(high)}" if below is not None else f" of at most {_figure(high)}"
     return ""
+
+
+def _figure(number: float) -> str:
+    """Return a number in few characters; 2^k − 1 as such, for it is nothing in decimals."""
+    if isinstance(number, int) and number > 10**15 and (number + 1) & number == 0:
+        return f"2^{number.bit_length()} − 1"
+    return f"{number:g}"
 
 
 def unquote(value: object) -> str:

@@ -1,0 +1,109 @@
+"""Correlations: three ways to write them, and how they fail. Eigenvalues of the examples are known in closed form."""
+
+import pytest
+
+from tests.spec.small import HEAD, faults, read
+
+BODIES = """shared:
+  w: {white_noise: {sd: 1}}
+series:
+  a: {white_noise: {sd: 1}}
+  b: [{ar: {phi: 0.5, sd: 1}, as: swing}, {constant: 1}]
+  c: {exp: {random_walk: {shock: {garch: {sd: 1, alpha: 0.1}, as: noise}}}}
+  d: {constant: 1}
+"""
+
+
+def correlation(text):
+    return read(HEAD + BODIES + f"correlation: {text}\n").correlation
+
+
+def correlation_faults(text):
+    return faults(HEAD + BODIES + f"correlation: {text}\n")
+
+
+def test_without_correlation_there_is_none():
+    spec = read(HEAD + BODIES)
+    assert (spec.correlation.names, spec.correlation.matrix) == ((), ())
+
+
+def test_pairs_in_order_of_first_appearance():
+    found = correlation(
+        "[{between: [c.noise, a.white_noise], value: 0.3}, {between: [w.white_noise, c.noise], value: -0.2}]"
+    )
+    assert found.names == ("c.noise", "a.white_noise", "w.white_noise")
+    assert found.matrix == ((1.0, 0.3, -0.2), (0.3, 1.0, 0.0), (-0.2, 0.0, 1.0))
+
+
+def test_a_matrix_a_group_and_pairs_mean_the_same():
+    group = correlation("{within: [a.white_noise, b.swing, c.noise], value: 0.5}")
+    matrix = correlation(
+        "{names: [a.white_noise, b.swing, c.noise], matrix: [[1, 0.5, 0.5], [0.5, 1, 0.5], [0.5, 0.5, 1]]}"
+    )
+    pairs = correlation(
+        "[{between: [a.white_noise, b.swing], value: 0.5}, {between: [a.white_noise, c.noise], value: 0.5}, "
+        "{between: [c.noise, b.swing], value: 0.5}]"
+    )
+    assert group == matrix == pairs
+
+
+@pytest.mark.parametrize(
+    ("text", "message", "place"),
+    [
+        # Equal correlations ρ of n have the smallest eigenvalue 1 + (n − 1)ρ for ρ < 0: here 1 − 2·0.6.
+        ("{within: [a.white_noise, b.swing, c.noise], value: -0.6}", "expected a positive definite correlation, got "
+         "one whose smallest eigenvalue is -0.2; bring the values nearer to 0, or to each other", "correlation:14"),
+        # A path x – y – z with correlations ρ has the smallest eigenvalue 1 − ρ√2: here 1 − 0.9·1.41421 = −0.273.
+        ("[{between: [a.white_noise, b.swing], value: 0.9}, {between: [b.swing, c.noise], value: 0.9}]",
+         "expected a positive definite correlation, got one whose smallest eigenvalue is -0.273; bring the values "
+         "nearer to 0, or to each other", "correlation:14"),
+        ("{between: [a.white_noise, b.swing], value: 1}", "expected a number in (-1, 1), got 1 (value: correlation of "
+         "the primary normals)", "correlation.value:57"),
+        ("{between: [a.white_noise, a.white_noise], value: 0.1}",
+         "expected two different names, got a.white_noise twice", "correlation.between[1]:40"),
+        ("[{between: [a.white_noise, b.swing], value: 0.1}, {between: [b.swing, a.white_noise], value: 0.1}]",
+         "the correlation of b.swing and a.white_noise is given twice; remove one", "correlation[1].between[1]:84"),
+        ("{between: [a.white_noise, z.swing], value: 0.1}",
+         "there is no series or shared body named z; expected one of w, a, b, c, d", "correlation.between[1]:40"),
+        ("{between: [a.white_noise, b], value: 0.1}",
+         "expected a term that draws shocks, got b; in b that is b.swing", "correlation.between[1]:40"),
+        ("{between: [a.white_noise, b.constant], value: 0.1}",
+         "expected a term that draws shocks, got b.constant; in b that is b.swing", "correlation.between[1]:40"),
+        ("{between: [a.white_noise, c.random_walk], value: 0.1}",
+         "expected a term that draws shocks, got c.random_walk; in c that is c.noise", "correlation.between[1]:40"),
+        ("{between: [a.white_noise, d.constant], value: 0.1}",
+         "expected a term that draws shocks, got d.constant; nothing in d draws any", "correlation.between[1]:40"),
+        ("{between: [a.white_noise], value: 0.1}", "expected a list of two names such as load.arma, got a list of 1 "
+         "(between: the two that are correlated)", "correlation.between:24"),
+        ("{within: a, value: 0.1}", 'expected a list of at least two names such as load.arma, got "a" '
+         "(within: names of which any two are correlated alike)", "correlation.within:23"),
+        ("{betwen: [a, b], value: 0.1}", "expected {between: [a.x, b.y], value: 0.3}, {within: […], value: 0.3} or "
+         "{names: […], matrix: […]}, got a mapping with the keys betwen, value; did you mean between?",
+         "correlation:14"),
+        ("5", "expected {between: [a.x, b.y], value: 0.3}, {within: […], value: 0.3} or {names: […], matrix: […]}, "
+         "got 5", "correlation:14"),
+        ("{between: [a.white_noise, b.swing]}", "expected the key value (correlation of the primary normals: a number "
+         "in (-1, 1))", "correlation:14"),
+        ("{names: [a.white_noise, b.swing], matrix: [[1, 0.1]]}", "expected 2 rows of 2 for 2 names, got 1 row of 2",
+         "correlation.matrix:56"),
+        ("{names: [a.white_noise, b.swing], matrix: [[1, 0.1], [0.1, 0.9]]}",
+         "expected 1 on the diagonal, got 0.9 in row 2", "correlation.matrix[1]:67"),
+        ("{names: [a.white_noise, b.swing], matrix: [[1, 0.1], [0.2, 1]]}",
+         "expected a symmetric matrix, got 0.2 in row 2, column 1 and 0.1 across it", "correlation.matrix[1]:67"),
+        ("{names: [a.white_noise, b.swing], matrix: 5}", "expected a list of rows of numbers, as in [[1, 0.3], "
+         "[0.3, 1]], got 5 (matrix: correlations of the primary normals, with 1 on the diagonal)",
+         "correlation.matrix:56"),
+    ],
+)  # fmt: skip
+def test_faults(text, message, place):
+    path, column = place.split(":")
+    assert correlation_faults(text) == [f"{message}\n  at {path} (a.yaml, line 12, column {column})"]
+
+
+def test_too_many_names():
+    bodies = "".join(f"  s{i}: {{white_noise: {{sd: 1}}}}\n" for i in range(1001))
+    names = ", ".join(f"s{i}.white_noise" for i in range(1001))
+    found = faults(HEAD + "series:\n" + bodies + f"correlation: {{within: [{names}], value: 0.1}}\n")
+    assert found == [
+        "expected at most 1000 correlated names, got 1,001\n  at correlation (a.yaml, line 1007, column 14)"
+    ]
