@@ -12,7 +12,8 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
-_CHUNK = 64  # steps taken at once after the gain has settled
+_CHUNK = 32  # steps taken at once after the gain has settled
+_COLUMNS = 256  # paths in one product: small enough that the linear algebra library stays in one thread
 _SETTLED = 1e-13  # relative change of the gain that counts as none
 _LONGEST = 65_536  # the gain is taken as settled after this many steps at the latest
 
@@ -123,10 +124,18 @@ class Kalman:
     def _chunks(self, y: NDArray, state: NDArray) -> tuple[NDArray, NDArray]:
         paths = y.shape[1]
         blocks = y.reshape(-1, _CHUNK, paths)
+        out, ends = np.empty_like(blocks), np.empty_like(state)
+        for left in range(0, paths, _COLUMNS):
+            some = slice(left, left + _COLUMNS)
+            ends[:, some] = self._some(blocks[:, :, some], state[:, some], out[:, :, some])
+        return out.reshape(y.shape), ends
+
+    def _some(self, blocks: NDArray, state: NDArray, out: NDArray) -> NDArray:
         pushed = np.matmul(self._r, blocks)
-        starts = np.empty((len(blocks), len(self.c), paths))
+        starts = np.empty((len(blocks), *state.shape))
         for i, push in enumerate(pushed):
             starts[i] = state
             state = self._m @ state + push
-        out = np.matmul(self._h, blocks) - np.matmul(self._o, starts)
-        return out.reshape(y.shape), state
+        out[...] = np.matmul(self._h, blocks)
+        out -= np.matmul(self._o, starts)
+        return state

@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 
 from procgen.checks.scores import Scores
 
-GAUSSIAN_WINDOW = 192  # steps of a pooled statistic with an exact law (its cost grows with the cube)
+GAUSSIAN_WINDOW = 96  # steps of a pooled statistic with an exact law (its cost grows with the cube)
 WINDOW = 4096  # steps of a pooled statistic without one
 PAIR_LIMIT = 36  # pairs of series that are compared
 

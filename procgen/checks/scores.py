@@ -73,17 +73,19 @@ class Scores:
         so they speak of the shape alone (Neyman 1937, smooth tests, with the two directions projected out).
         """
         centre = (2 * np.arange(BINS) + 1) / BINS - 1
-        basis = np.polynomial.legendre.legvander(centre, _ORDER)
-        basis = np.linalg.qr(basis)[0][:, 1:] * np.sqrt(BINS)
+        basis = np.polynomial.legendre.legvander(centre, _ORDER)[:, 1:]
+        basis -= basis.mean(axis=0)
+        gram = np.einsum("bi,bj->ij", basis, basis) / BINS
+        basis = np.einsum("bi,ij->bj", basis, np.linalg.inv(np.linalg.cholesky(gram)).T)
         edges = np.arange(1, BINS) / BINS
         q = self.distribution.ppf(edges)
         density = self.distribution.pdf(q)
         rise = np.diff(basis, axis=0)
-        level, spread = rise.T @ density, rise.T @ (q * density)
+        level, spread = np.einsum("bi,b->i", rise, density), np.einsum("bi,b->i", rise, q * density)
         spread_first = np.linalg.qr(np.column_stack([level, spread, np.eye(_ORDER)]))[0]
         signs = np.sign([level @ spread_first[:, 0], spread @ spread_first[:, 1]])
         spread_first[:, :2] *= np.where(signs == 0, 1.0, signs)
-        return basis @ spread_first
+        return np.einsum("bi,ij->bj", basis, spread_first)
 
     def component_sums(self, counts: NDArray) -> NDArray:
         """(8,) standardised component sums, each asymptotically standard normal."""

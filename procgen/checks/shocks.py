@@ -94,7 +94,7 @@ class ShockSums:
         g = self.scores.normal_scores(z)
         u = ndtr(g)
         self.n += z.size
-        self.sums += z.sum(), np.vdot(z, z)
+        self.sums += z.sum(), np.einsum("tp,tp->", z, z)
         self.counts += bin_counts(u)
         self._along(g, lane)
         self._across(g, first_step)
@@ -156,7 +156,7 @@ def _products(later: NDArray, earlier: NDArray, lag: int, past: int) -> tuple[fl
     if start >= len(later):
         return 0.0, 0.0
     a, b = later[start:], earlier[start - lag : len(earlier) - lag]
-    return float(a.size), float(np.dot(a.ravel(), b.ravel()))
+    return float(a.size), float(np.einsum("i,i->", a.ravel(), b.ravel()))
 
 
 class CrossSums:
