@@ -79,11 +79,10 @@ def _mean_and_variance(gather: Gather, column: int, i: int) -> Iterator[Check]:
                 plan.name, "variance", _at(plan, i), "spread", judge.variance(moments.covariance(k, k), stored, n - 1)
             )
         return
-    excess = plan.excess.get(i)
     sample = _sample(gather.deviations, k)
     yield _limit(plan, "mean", _at(plan, i), "level", sample, mu, 1, math.sqrt(sigma2))
     product = gather.plan.products.index((column, i, i))
-    sd = None if excess is None else sigma2 * math.sqrt(excess + 2)
+    sd = plan.product_sd.get((i, i))
     yield _limit(plan, "variance", _at(plan, i), "spread", _sample(gather.products, product), sigma2, 2, sd)
 
 
@@ -129,7 +128,7 @@ def _covariances(gather: Gather, column: int) -> Iterator[Check]:
                 yield Check.of(plan.name, "covariance", probe, "memory", finding)
         else:
             sample = _sample(gather.products, gather.plan.products.index((column, i, j)))
-            yield _limit(plan, "covariance", probe, "memory", sample, known, 2, None)
+            yield _limit(plan, "covariance", probe, "memory", sample, known, 2, plan.product_sd.get((i, j)))
 
 
 def _growth(gather: Gather, column: int) -> Iterator[Check]:

@@ -50,7 +50,7 @@ class SeriesPlan:
     gaussian: bool = False
     highest: float = 0.0
     scores: dict[int, Scores] = field(default_factory=dict)  # position of a probe -> its marginal law
-    excess: dict[int, float | None] = field(default_factory=dict)
+    product_sd: dict[tuple[int, int], float | None] = field(default_factory=dict)  # of deviations, not Gaussian
     pool: Pool | None = None
     period: int | None = None
 
@@ -122,12 +122,14 @@ def plan_series(name: str, theory: Any, steps: int, grain: float, periods: Seque
         plan.covariance[i, j] = None if value is None else float(np.ravel(value)[0])
     if plan.mean is not None and plan.variance is not None:
         _marginals(plan)
+        if not plan.gaussian:
+            plan.product_sd = {(i, j): _product_sd(plan, i, j) for i, j in [*_diagonal(len(at)), *plan.pairs]}
         plan.pool = _pool(plan, steps)
     return plan
 
 
 def _marginals(plan: SeriesPlan) -> None:
-    """Known laws at three of the probes, and the kurtosis where the law is not known."""
+    """Known laws at three of the probes."""
     assert plan.mean is not None and plan.variance is not None
     moving = np.flatnonzero(~plan.constant)
     chosen = sorted({moving[0], moving[len(moving) // 2], moving[-1]}) if len(moving) else []
@@ -135,8 +137,25 @@ def _marginals(plan: SeriesPlan) -> None:
         law = plan.theory.marginal(int(plan.steps[i]))
         if law is not None and np.isfinite(plan.variance[i]):
             plan.scores[i] = Scores(Marginal(law, float(plan.mean[i]), float(np.sqrt(plan.variance[i]))))
-    for i in map(int, () if plan.gaussian else moving):
-        plan.excess[i] = plan.theory.excess_kurtosis_at(int(plan.steps[i]))
+
+
+def _diagonal(count: int) -> list[tuple[int, int]]:
+    return [(i, i) for i in range(count)]
+
+
+def _product_sd(plan: SeriesPlan, i: int, j: int) -> float | None:
+    """Standard deviation of the product of the deviations at two probes, from the covariance of their squares."""
+    if plan.constant[i] or plan.constant[j] or not plan.highest > 4:
+        return None
+    first, lag = int(plan.steps[i]), int(plan.steps[j] - plan.steps[i])
+    if i == j:
+        excess = plan.theory.excess_kurtosis_at(first)
+        return None if excess is None else float(plan.variance[i]) * float(np.sqrt(excess + 2))
+    squares, known = plan.theory.autocovariance_of_squares(np.array([lag]), first), plan.covariance[i, j]
+    if squares is None or known is None:
+        return None
+    variance = float(squares[0]) + float(plan.variance[i] * plan.variance[j]) - float(known) ** 2
+    return float(np.sqrt(variance)) if variance > 0 else None
 
 
 def _pool(plan: SeriesPlan, steps: int) -> Pool | None:
