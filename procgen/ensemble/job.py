@@ -224,15 +224,17 @@ class Job:
             return tuple(tuple(chain) for _, chain in groupby(blocks, key=lambda block: block.first_path))
         return chains(self.whole, row_bytes(self.columns), workers)
 
+    def _listed(self) -> set[str]:
+        """Names of parts that the manifest or the plan in the folder lists, which makes them ours."""
+        found = self._manifest()
+        names = {part.file for part in found.parts} if found is not None else set()
+        return names | set((self.folder.read_json(PLAN) or {}).get("files", ()))
+
     def _remove_old(self) -> None:
         """Remove the ensemble that is there: files that it lists or that say that they are ours."""
-        listed: set[str] = set()
-        found = self.folder.read_json(MANIFEST)
-        if found is not None:
-            listed = {part.file for part in Manifest.read(found, str(self.folder.path / MANIFEST)).parts}
-        listed |= set((self.folder.read_json(PLAN) or {}).get("files", ()))
+        listed = self._listed()
         ours = [name for name in self.folder.part_files() if name in listed or self._ours(name)]
-        self.folder.remove(([MANIFEST] if found is not None else []) + ours)
+        self.folder.remove(([MANIFEST] if self.folder.size(MANIFEST) >= 0 else []) + ours)
         self.folder.clean_state(keep_plan=False)
 
     def _ours(self, name: str) -> bool:
@@ -242,7 +244,7 @@ class Job:
             return False
         return True
 
-    def _present(self, plan: Sequence[Chain]) -> dict[Block, dict[str, Any]]:
+    def _present(self, plan: Sequence[Chain], listed: set[str]) -> dict[Block, dict[str, Any]]:
         """Records of the planned parts that are there and belong to this render."""
         found = {}
         files = set(self.folder.part_files())
@@ -250,7 +252,12 @@ class Job:
             name = part.file(self.whole)
             if name not in files:
                 continue
-            identity, nodes, _ = parquet.footer(self.folder.path / name)
+            try:
+                identity, nodes, _ = parquet.footer(self.folder.path / name)
+            except EnsembleError as error:
+                if name in listed:
+                    continue  # ours and damaged: it is drawn again
+                raise EnsembleError(f"{error}; it is in the way and not ours: move it away") from None
             self._refuse_other(identity)
             if identity.get("part") == asdict(part):
                 found[part] = {"part": asdict(part), "bytes": self.folder.size(name), "nodes": nodes}
@@ -263,9 +270,9 @@ class Job:
     ) -> OnDisk:
         if overwrite:
             self._remove_old()
+        self._refuse_too_large()
         plan = self._layout(workers, resume)
-        there = self._present(plan)
-        self._refuse_too_large(self.whole.rows - sum(part.rows for part in there))
+        there = self._present(plan, self._listed())
         self.folder.clean_state(keep_plan=True)
         files = [part.file(self.whole) for chain in plan for part in chain]
         blocks = [[(b.first_path, b.paths, b.first_step, b.steps) for b in chain] for chain in plan]
@@ -289,12 +296,14 @@ class Job:
         out = str(self.folder.path.absolute())
         return Task(self.spec.raw, self.identity, out, self.whole, chain, start, self.reveal, self.factory)
 
-    def _refuse_too_large(self, rows: int) -> None:
-        need = rows * sum(TYPES[column.type] for column in self.columns)
+    def _refuse_too_large(self) -> None:
+        """Refuse what the disk cannot hold, before the parts are even planned."""
+        need = self.whole.rows * sum(TYPES[column.type] for column in self.columns)
         free = shutil.disk_usage(self.folder.path).free
-        if need > free:
+        there = sum(max(self.folder.size(name), 0) for name in self.folder.part_files())
+        if need - there > free:
             raise EnsembleError(
-                f"{rows} rows of {len(self.columns)} columns take about {bytes_text(need)}, and "
+                f"{self.whole.rows} rows of {len(self.columns)} columns take about {bytes_text(need)}, and "
                 f"{self.folder.path} has {bytes_text(free)} free; ask for fewer paths or steps, use "
                 "type: float32, or choose another OUT"
             )

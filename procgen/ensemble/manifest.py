@@ -20,7 +20,7 @@ FORMAT = 1
 
 @dataclass(frozen=True)
 class PartRecord:
-    """One part: its file, what it covers, its size, and one hash over its digest nodes."""
+    """One part: its file, what it covers, its size, and one hash over the digest nodes of its values."""
 
     file: str
     block: Block
@@ -168,16 +168,16 @@ def _covers(parts: Sequence[PartRecord], whole: Block) -> None:
         raise ValueError(f"its parts do not cover paths {whole.first_path} to {whole.end_path - 1}")
 
 
-def node(nodes: Mapping[str, Any]) -> str:
-    """One hash over all digest nodes of a part."""
-    text = json.dumps(nodes, sort_keys=True, separators=(",", ":"))
+def node(stored: Mapping[str, str]) -> str:
+    """One hash over the digest nodes (hex, by column) of a part's stored values."""
+    text = json.dumps(stored, sort_keys=True, separators=(",", ":"))
     return hashlib.sha256(text.encode()).hexdigest()
 
 
 def part_record(record: Mapping[str, Any], whole: Block) -> PartRecord:
     """The manifest's line about a part, from what `render_chain` returned."""
     block = Block(**record["part"])
-    return PartRecord(block.file(whole), block, record["bytes"], node(record["nodes"]))
+    return PartRecord(block.file(whole), block, record["bytes"], node(record["nodes"]["stored"]))
 
 
 def roots(records: Iterable[Mapping[str, Any]], whole: Block, kind: str, names: Iterable[str]) -> dict[str, str]:

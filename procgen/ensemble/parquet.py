@@ -143,7 +143,7 @@ def footer(path: Path) -> tuple[dict[str, Any], dict[str, Any], pq.FileMetaData]
     except (OSError, pa.ArrowException, ValueError) as error:
         raise EnsembleError(f"{path} cannot be read as Parquet: {_first_line(error)}") from None
     except KeyError:
-        raise EnsembleError(f"{path} was not written by procgen render: its metadata names no spec") from None
+        raise EnsembleError(f"{path} was not written by procgen render, or was changed since") from None
 
 
 def _first_line(error: BaseException) -> str:

@@ -60,7 +60,7 @@ Chain = tuple[Block, ...]
 def chains(whole: Block, row_bytes: int, workers: int = 1) -> tuple[Chain, ...]:
     """The parts of `whole`, chain by chain: 50–130 MB each, fewer rows when several workers share them."""
     width, steps = _part_shape(whole, row_bytes)
-    count = -(-whole.paths // width)
+    count = _count(whole, width, CELL if width % CELL == 0 else LANES)
     if workers > 1 and whole.rows > BUSY_ROWS:
         count = max(count, workers)
         if count < 4 * workers:
@@ -84,6 +84,11 @@ def _part_shape(whole: Block, row_bytes: int) -> tuple[int, int]:
 
 def _floor(value: int, grain: int) -> int:
     return max(value // grain, 1) * grain
+
+
+def _count(block: Block, width: int, grain: int) -> int:
+    """Ranges of at most `width` paths, cut at multiples of `grain`, that `block` needs."""
+    return -(-(block.first_path % grain + block.paths) // width)
 
 
 def _spread(first: int, paths: int, count: int, grain: int) -> list[tuple[int, int]]:
@@ -114,7 +119,7 @@ def cut(block: Block, rows: int, steps: int | None = None) -> Iterator[Block]:
             yield from _steps(block, path, 1, size)
         return
     grain = CELL if width >= CELL else LANES if width >= LANES else 1
-    count = -(-block.paths // _floor(width, grain))
+    count = _count(block, _floor(width, grain), grain)
     for first, paths in _spread(block.first_path, block.paths, count, grain):
         yield Block(first, paths, block.first_step, block.steps)
 

@@ -57,6 +57,8 @@ class Folder:
             data = json.loads(path.read_text(encoding="utf-8"))
         except FileNotFoundError:
             return None
+        except NotADirectoryError:
+            raise EnsembleError(f"{self.path} is not a folder; choose another OUT") from None
         except OSError as error:
             raise EnsembleError(system_sentence(error, f"reading {path}")) from None
         except (ValueError, RecursionError) as error:
@@ -119,11 +121,8 @@ class Folder:
         (Windows) nothing is locked.
         """
         try:
-            self.state.mkdir(parents=True, exist_ok=True)
             descriptor = self._lock()
-        except NotADirectoryError:
-            raise EnsembleError(f"{self.path} is not a folder; choose another OUT") from None
-        except FileExistsError as error:
+        except (NotADirectoryError, FileExistsError) as error:
             raise EnsembleError(f"{error.filename} is not a folder; choose another OUT") from None
         except OSError as error:
             raise EnsembleError(system_sentence(error, f"making {self.path}")) from None
@@ -138,7 +137,11 @@ class Folder:
         path = self.state / "lock"
         give_up = time.monotonic() + PATIENCE
         while True:
-            descriptor = os.open(path, os.O_RDWR | os.O_CREAT, 0o666)
+            self.state.mkdir(parents=True, exist_ok=True)
+            try:
+                descriptor = os.open(path, os.O_RDWR | os.O_CREAT, 0o666)
+            except FileNotFoundError:
+                continue  # the previous holder removed the folder in between
             if _try_lock(descriptor):
                 # the previous holder may have removed the file while this process waited for it
                 if _same_file(descriptor, path):
@@ -152,7 +155,6 @@ class Folder:
                     f"another render is at work in {self.path} (process {holder}); wait for it, or choose another OUT"
                 )
             os.close(descriptor)
-            self.state.mkdir(exist_ok=True)
             time.sleep(0.02)
 
     def finish(self) -> None:

@@ -8,14 +8,18 @@ from __future__ import annotations
 import hashlib
 import json
 import os
+import subprocess
+import sys
 import time
+from pathlib import Path
 from types import SimpleNamespace
 
 import numpy as np
 
+from procgen.ensemble import check_digest, plan, render
 from procgen.ensemble.columns import Column
 
-FACTORY = "fakes:fake_source"
+FACTORY = "tests.ensemble.fakes:fake_source"
 
 
 class FakeSpec:
@@ -58,7 +62,7 @@ class FakeRun:
     def tile(self, steps):
         if "_pause" in self.raw:
             time.sleep(self.raw["_pause"])
-        if self.raw.get("_die_at", -1) == self.step and self.first_path > 0:
+        if self.raw.get("_die_at", -1) == self.step and "procgen.ensemble.worker" in sys.modules:
             os._exit(7)
         out = {}
         for k, name in enumerate(self.raw["columns"]):
@@ -92,3 +96,46 @@ def fake_source(raw, reveal=()):
 
 def fake_spec(**raw):
     return FakeSpec(raw)
+
+
+def fake_render(spec, out=None, **how):
+    return render(spec, out, factory=FACTORY, **how)
+
+
+def fake_check(path, **how):
+    return check_digest(path, factory=FACTORY, **how)
+
+
+ROOT = Path(__file__).resolve().parents[2]
+SCRIPT = """
+import json, sys
+from procgen.ensemble import plan
+from procgen.ensemble.errors import EnsembleError
+from tests.ensemble.fakes import fake_render, fake_spec
+job = json.loads(sys.argv[1])
+plan.PART_BYTES = job.get("part_bytes", plan.PART_BYTES)
+if "file_limit" in job:
+    import resource, signal
+    signal.signal(signal.SIGXFSZ, signal.SIG_IGN)
+    resource.setrlimit(resource.RLIMIT_FSIZE, (job["file_limit"],) * 2)
+def progress(done, rows):
+    print("drawing", flush=True)
+try:
+    print(fake_render(fake_spec(**job["spec"]), job["out"], progress=progress, **job["how"]).digest)
+except EnsembleError as error:
+    sys.exit(f"refused: {error}")
+"""
+
+
+def start(spec, out, part_bytes=plan.PART_BYTES, file_limit=None, **how):
+    """A render in a process of its own, as soon as it is drawing."""
+    job = {"spec": spec, "out": str(out), "part_bytes": part_bytes, "how": how}
+    job |= {} if file_limit is None else {"file_limit": file_limit}
+    command = [sys.executable, "-c", SCRIPT, json.dumps(job)]
+    pipe = subprocess.PIPE
+    return subprocess.Popen(command, cwd=ROOT, stdout=pipe, stderr=pipe, text=True, start_new_session=True)
+
+
+def visible(out):
+    """What a reader sees in OUT."""
+    return sorted(path.name for path in Path(out).iterdir() if path.name != ".state")

@@ -1,0 +1,87 @@
+"""Parts, batches, lanes and tiles: every row once and in order, bounded, cut where digests allow."""
+
+from hypothesis import given, settings
+from hypothesis import strategies as st
+
+from procgen.ensemble import plan
+from procgen.ensemble.plan import CELL, LANES, STEPS, Block, batches, chains, cut, lanes, tiles
+
+shapes = st.builds(
+    Block,
+    st.integers(0, 5000) | st.integers(0, 2**40),
+    st.integers(1, 200) | st.integers(1, 200_000),
+    st.just(0),
+    st.integers(1, 200) | st.integers(1, 3_000_000),
+)
+
+
+def rows_in_order(blocks, whole):
+    """Whether blocks cover `whole` in (path, step) order without gap or overlap."""
+    path, step, end = whole.first_path, whole.first_step, whole.first_path
+    for block in blocks:
+        if step == whole.first_step:
+            end = block.end_path
+        if (block.first_path, block.first_step, block.end_path) != (path, step, end):
+            return False
+        step = block.end_step
+        if step == whole.end_step:
+            path, step = end, whole.first_step
+    return (path, step) == (whole.end_path, whole.first_step)
+
+
+@settings(max_examples=60, deadline=None)
+@given(shapes, st.integers(1, 50), st.integers(1, 9))
+def test_parts_cover_the_ensemble_once_and_are_cut_where_leaves_are(whole, columns, workers):
+    plans = chains(whole, 8 * columns, workers)
+    parts = [part for chain in plans for part in chain]
+    assert rows_in_order(parts, whole)
+    for part in parts:
+        assert part.first_path in (whole.first_path, part.first_path // LANES * LANES)
+        assert part.first_step % STEPS == 0
+        narrowest = min(part.paths, LANES) * min(part.steps, STEPS) * 8 * columns
+        assert part.rows * 8 * columns <= max(2.6 * plan.PART_BYTES, narrowest)
+
+
+@settings(max_examples=50, deadline=None)
+@given(shapes, st.integers(1, 50))
+def test_batches_cover_a_part_in_row_order_within_the_buffer(whole, columns):
+    chain = chains(whole, 8 * columns)[0]
+    for part in {chain[0], chain[-1]}:
+        found = list(batches(part, 8 * columns, chain[0].steps))
+        assert rows_in_order(found, part)
+        assert max(batch.rows for batch in found) * 8 * columns <= 1.3 * plan.BUFFER_BYTES
+        assert rows_in_order(list(lanes(found[0])), found[0])
+
+
+@settings(max_examples=50, deadline=None)
+@given(shapes, st.integers(1, 50))
+def test_all_parts_of_a_chain_are_drawn_by_the_same_runs(whole, columns):
+    """A carried state belongs to a range of paths, so the last, shorter part must be cut like the first."""
+    chain = chains(whole, 8 * columns)[0]
+
+    def ranges(part):
+        pieces = [p for b in batches(part, 8 * columns, chain[0].steps) for p in lanes(b)]
+        return {(piece.first_path, piece.paths) for piece in pieces}
+
+    if len(chain) > 1:
+        assert ranges(chain[0]) == ranges(chain[-1])
+
+
+@given(st.integers(1, 10**6), st.integers(1, 9000), st.integers(1, 300))
+def test_tiles_are_all_steps_and_bounded(steps, paths, columns):
+    found = tiles(steps, paths, columns)
+    assert sum(found) == steps and min(found) >= 1
+    assert max(found) * paths <= max(plan.TILE, paths)
+
+
+def test_row_groups_hold_whole_paths_or_a_piece_of_one():
+    assert {b.steps for b in cut(Block(0, 4096, 0, 1000), 1 << 20)} == {1000}
+    assert {b.paths for b in cut(Block(0, 3, 0, 2_500_000), 1 << 20)} == {1}
+
+
+def test_the_usual_shape_is_cut_at_cells_and_keeps_all_workers_busy():
+    for workers in (1, 2, 3, 7):
+        plans = chains(Block(0, 65_536, 0, 1000), 8, workers)
+        assert len(plans) >= workers
+        assert all(len(chain) == 1 and chain[0].first_path % CELL == 0 for chain in plans)
+        assert len({chain[0].paths for chain in plans}) <= 2

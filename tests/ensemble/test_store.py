@@ -1,0 +1,213 @@
+"""Nothing half-written looks whole: kills, full disks, locks, other people's files."""
+
+import contextlib
+import os
+import random
+import shutil
+import signal
+import subprocess
+import time
+
+import numpy as np
+import pytest
+
+from procgen.ensemble import EnsembleError, open_ensemble, plan
+from procgen.ensemble.parquet import footer
+from procgen.ensemble.plan import STEPS
+from procgen.ensemble.store import PART
+from tests.ensemble.fakes import fake_check, fake_render, fake_spec, start, visible
+
+WIDE = {"seed": 3, "paths": 3000, "steps": 40, "columns": {"x": {}, "y": {"decimals": 1}}}
+LONG = {"seed": 3, "paths": 20, "steps": 3 * STEPS + 7, "columns": {"x": {}}}
+PARTS = {"part_bytes": 1 << 19}
+STEP_PARTS = {"part_bytes": 1 << 21}
+
+
+@pytest.mark.parametrize(
+    "spec,layout,workers", [(WIDE, PARTS, 1), (WIDE, PARTS, 2), (LONG, STEP_PARTS, 1)], ids=["1", "2", "steps"]
+)
+def test_killed_at_any_moment_then_resumed_gives_the_same_digest(tmp_path, spec, layout, workers):
+    moments = random.Random(spec["paths"] + workers)
+    for _ in range(4):
+        render = start(spec, tmp_path, **layout, workers=workers, resume=True)
+        render.stdout.readline()
+        time.sleep(moments.uniform(0, 0.2))
+        render.kill()
+        render.communicate()
+        for name in visible(tmp_path):
+            if PART.fullmatch(name):
+                footer(tmp_path / name)  # whole, or this raises
+    ens = fake_render(fake_spec(**spec), tmp_path, resume=True, workers=1)
+    assert ens.digest == fake_render(fake_spec(**spec)).digest
+    assert fake_check(tmp_path).ok
+    assert not (tmp_path / ".state").exists()
+
+
+@pytest.mark.parametrize("signum", [signal.SIGINT, signal.SIGTERM])
+def test_ctrl_c_and_termination_leave_whole_parts_and_no_process(tmp_path, signum):
+    spec = WIDE | {"_pause": 0.05}
+    render = start(spec, tmp_path, **PARTS, workers=2)
+    for _ in range(3):
+        render.stdout.readline()
+    os.killpg(render.pid, signum)
+    render.communicate(timeout=10)
+    assert render.returncode != 0
+    assert "manifest.json" not in visible(tmp_path)
+    if signum == signal.SIGINT:
+        assert not list((tmp_path / ".state").glob("*.tmp"))
+    again = fake_render(fake_spec(**spec), tmp_path, resume=True)
+    assert again.digest == fake_render(fake_spec(**WIDE)).digest
+
+
+def test_a_second_render_into_one_folder_is_refused_until_the_first_is_dead(tmp_path):
+    first = start(WIDE | {"_pause": 9.0}, tmp_path, **PARTS, workers=2)
+    while not (tmp_path / ".state" / "plan.json").exists():
+        time.sleep(0.01)
+    with pytest.raises(EnsembleError, match=f"another render is at work in .* \\(process {first.pid}\\)"):
+        fake_render(fake_spec(**WIDE), tmp_path, overwrite=True)
+    first.kill()
+    first.communicate()
+    fake_render(fake_spec(**WIDE), tmp_path, overwrite=True)
+
+
+def test_a_worker_that_dies_is_reported_and_the_rest_is_kept(tmp_path, monkeypatch):
+    monkeypatch.setattr(plan, "PART_BYTES", PARTS["part_bytes"])
+    spec = fake_spec(**WIDE, _die_at=0, _pause=0.3)
+    with pytest.raises(EnsembleError, match=r"a worker process died \(exit code 7\).*--resume"):
+        fake_render(spec, tmp_path, workers=2)
+    assert fake_render(spec, tmp_path, workers=1, resume=True).digest == fake_render(spec).digest
+
+
+@contextlib.contextmanager
+def small_disk(path, size):
+    """A file system of `size` bytes at `path`; skips where mounting is not allowed."""
+    path.mkdir()
+    made = subprocess.run(["mount", "-t", "tmpfs", "-o", f"size={size}", "tmpfs", str(path)], capture_output=True)
+    if made.returncode:
+        pytest.skip("needs the right to mount a small file system")
+    try:
+        yield path
+    finally:
+        subprocess.run(["umount", "-l", str(path)], check=True)
+
+
+def test_a_full_disk_is_said_and_the_render_goes_on_when_there_is_room(tmp_path, monkeypatch):
+    monkeypatch.setattr(plan, "PART_BYTES", PARTS["part_bytes"])
+    spec = fake_spec(**WIDE)
+    real = shutil.disk_usage
+    with small_disk(tmp_path / "disk", 3 << 19) as disk:
+        with pytest.raises(EnsembleError, match=r"take about 1.92 MB, and .* has 1.5\d MB free"):
+            fake_render(spec, disk)
+        monkeypatch.setattr(shutil, "disk_usage", lambda path: real("/"))
+        with pytest.raises(EnsembleError, match=r"no space left while writing .*parquet; free some space"):
+            fake_render(spec, disk)
+        assert 0 < len(visible(disk)) < 4
+        assert not list((disk / ".state").glob("*.tmp"))
+        subprocess.run(["mount", "-o", "remount,size=8m", str(disk)], check=True)
+        assert fake_render(spec, disk, resume=True).digest == fake_render(spec).digest
+
+
+def test_a_write_that_the_system_refuses_leaves_no_file(tmp_path):
+    """The same as a full disk, where nothing can be mounted: a limit on the size of files."""
+    render = start(WIDE, tmp_path, **PARTS, file_limit=200_000, workers=1)
+    _, errors = render.communicate(timeout=20)
+    assert "refused: a file grew above the limit" in errors and "Traceback" not in errors
+    assert visible(tmp_path) == []
+    assert not list((tmp_path / ".state").glob("*.tmp"))
+
+
+def test_a_read_only_folder_serves_what_is_complete_and_refuses_the_rest(tmp_path):
+    spec = fake_spec(paths=20, steps=5)
+    with small_disk(tmp_path / "disk", 1 << 20) as disk:
+        made = fake_render(spec, disk)
+        subprocess.run(["mount", "-o", "remount,ro", str(disk)], check=True)
+        assert fake_render(spec, disk).digest == made.digest
+        assert fake_check(disk).ok
+        with pytest.raises(EnsembleError, match="no permission for making"):
+            fake_render(spec, disk, overwrite=True)
+
+
+def test_a_complete_ensemble_asked_for_again_is_not_drawn_again(tmp_path):
+    spec = fake_spec(paths=20, steps=5)
+    fake_render(spec, tmp_path)
+    before = [(path, path.stat().st_mtime_ns) for path in sorted(tmp_path.iterdir())]
+    fake_render(spec, tmp_path)
+    fake_render(spec, tmp_path, resume=True)
+    assert before == [(path, path.stat().st_mtime_ns) for path in sorted(tmp_path.iterdir())]
+
+
+def test_an_ensemble_of_another_kind_is_refused_unless_overwritten(tmp_path):
+    fake_render(fake_spec(paths=20, steps=5), tmp_path)
+    for change, word in [({"seed": 2}, "seed 1 there, 2 asked"), ({"steps": 6}, "steps 5 there, 6 asked")]:
+        for resume in (False, True):
+            with pytest.raises(EnsembleError, match=f"another kind \\({word}\\); choose another OUT"):
+                fake_render(fake_spec(paths=20, steps=5), tmp_path, **change, resume=resume)
+    with pytest.raises(EnsembleError, match=r"first_path 0 there, 16 asked"):
+        fake_render(fake_spec(paths=20, steps=5), tmp_path, first_path=16)
+    other = fake_render(fake_spec(paths=30, steps=5), tmp_path, overwrite=True)
+    assert visible(tmp_path) == ["manifest.json", other.manifest.parts[0].file]
+
+
+def test_an_unfinished_ensemble_is_said_to_be_one(tmp_path):
+    render = start(WIDE | {"_pause": 0.1}, tmp_path, **PARTS, workers=1)
+    render.stdout.readline()
+    render.kill()
+    render.communicate()
+    with pytest.raises(EnsembleError, match="unfinished ensemble; go on with: procgen render SPEC"):
+        open_ensemble(tmp_path)
+    with pytest.raises(EnsembleError, match="unfinished render of this spec; go on with --resume"):
+        fake_render(fake_spec(**WIDE), tmp_path)
+    with pytest.raises(EnsembleError, match="another kind"):
+        fake_render(fake_spec(**WIDE), tmp_path, seed=4, resume=True)
+
+
+def test_files_of_others_are_never_touched(tmp_path):
+    spec = fake_spec(paths=20, steps=5)
+    (tmp_path / "notes").mkdir()
+    foreign = {tmp_path / "README.md", tmp_path / "notes" / "paths.parquet", tmp_path / "paths-1-2.parquet"}
+    for path in foreign:
+        path.write_text("mine")
+    fake_render(spec, tmp_path)
+    fake_render(spec, tmp_path, seed=2, overwrite=True)
+    mine = tmp_path / "paths-000000000-000000029.parquet"
+    mine.write_text("mine")
+    with pytest.raises(EnsembleError, match=r"paths-000000000-000000029.parquet .* not ours: move it away"):
+        fake_render(spec, tmp_path, paths=30, overwrite=True)
+    assert all(path.read_text() == "mine" for path in [*foreign, mine])
+
+
+def test_a_manifest_of_others_is_not_removed(tmp_path):
+    for text in ('{"name": "app"}', "[]", "not json"):
+        (tmp_path / "manifest.json").write_text(text)
+        for overwrite in (False, True):
+            with pytest.raises(EnsembleError, match=r"manifest.json"):
+                fake_render(fake_spec(paths=20, steps=5), tmp_path, overwrite=overwrite)
+        assert (tmp_path / "manifest.json").read_text() == text
+
+
+def test_out_that_is_a_file_is_refused(tmp_path):
+    (tmp_path / "out").write_text("mine")
+    with pytest.raises(EnsembleError, match="out is not a folder; choose another OUT"):
+        fake_render(fake_spec(paths=20, steps=5), tmp_path / "out")
+
+
+def test_a_missing_part_is_named_and_drawn_again(tmp_path, monkeypatch):
+    monkeypatch.setattr(plan, "PART_BYTES", PARTS["part_bytes"])
+    made = fake_render(fake_spec(**WIDE), tmp_path)
+    (tmp_path / made.manifest.parts[2].file).unlink()
+    with pytest.raises(EnsembleError, match=f"{made.manifest.parts[2].file} is missing; draw it again"):
+        fake_render(fake_spec(**WIDE), tmp_path)
+    with pytest.raises(EnsembleError, match="is missing"):
+        open_ensemble(tmp_path)
+    monkeypatch.setattr(plan, "PART_BYTES", 1 << 26)
+    again = fake_render(fake_spec(**WIDE), tmp_path, resume=True)
+    assert again.manifest.json() == made.manifest.json()
+
+
+def test_a_missing_part_in_the_middle_of_a_chain_is_drawn_again(tmp_path, monkeypatch):
+    monkeypatch.setattr(plan, "PART_BYTES", STEP_PARTS["part_bytes"])
+    made = fake_render(fake_spec(**LONG), tmp_path)
+    (tmp_path / made.manifest.parts[2].file).unlink()
+    again = fake_render(fake_spec(**LONG), tmp_path, resume=True)
+    assert again.digest == made.digest
+    assert np.array_equal(again["x"], made["x"])
