@@ -12,7 +12,7 @@ from typing import Any
 from procgen.spec.model import Fault, Place
 
 MAX_DEPTH = 60
-MAX_NODES = 200_000
+MAX_NODES = 100_000
 
 NAME = re.compile(r"[A-Za-z_][A-Za-z0-9_]*", re.ASCII)
 # What no editor shows: controls except tab and line end, odd line ends, byte order marks, halves of characters.

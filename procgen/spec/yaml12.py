@@ -18,7 +18,7 @@ from procgen.spec.model import Fault, Place
 from procgen.spec.tree import HIDDEN, MAX_DEPTH, TooMuch, Tree, check_size, hidden_in, step_into
 from procgen.spec.words import did_you_mean
 
-MAX_BYTES = 1_000_000
+MAX_BYTES = 300_000
 
 _WORDS: dict[str, bool | None] = {"": None, "~": None}
 _WORDS |= {word: None for word in ("null", "Null", "NULL")}
@@ -96,6 +96,7 @@ class _Composer:
         self.stack: list[_Node] = []
         self.pending: list[_Node | None] = []  # of each open mapping: the key that waits for its value
         self.root: _Node | None = None
+        self.count = 0
 
     def compose(self, text: str) -> _Node:
         for event in yaml.parse(text, Loader=yaml.SafeLoader):
@@ -150,6 +151,8 @@ class _Composer:
         return node
 
     def _add(self, node: _Node) -> None:
+        self.count += 1
+        check_size(self.count, 0, Place(self.file, node.line, node.column, ""))
         if not self.stack:
             self.root = node
             return

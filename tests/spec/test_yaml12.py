@@ -157,7 +157,7 @@ def bomb(levels, width):
 
 
 REFUSED = [
-    (bomb(40, 10), "expected at most 200,000 values, with aliases expanded; count what anchors and aliases (& and *) "
+    (bomb(40, 10), "expected at most 100,000 values, with aliases expanded; count what anchors and aliases (& and *) "
      "expand to"),
     (bomb(70, 1), "expected at most 60 levels of nesting; take the inner levels apart"),
     ("[" * 900, "expected at most 60 levels of nesting; take the inner levels apart"),
@@ -165,7 +165,7 @@ REFUSED = [
     ("- " * 100_000, "expected at most 60 levels of nesting; take the inner levels apart"),
     ("? " * 100_000, "expected at most 60 levels of nesting; take the inner levels apart"),
     ("{a: " * 5000, "expected at most 60 levels of nesting; take the inner levels apart"),
-    ("x" * 1_000_001, "expected a spec of at most 1,000,000 characters, got 1,000,001"),
+    ("x" * 300_001, "expected a spec of at most 300,000 characters, got 300,001"),
 ]  # fmt: skip
 
 
@@ -191,8 +191,8 @@ def test_files_that_are_no_spec(tmp_path):
     )
     bad.write_bytes("procgen: 1\n".encode("utf-16"))
     assert refusal(bad) == "expected UTF-8, got UTF-16; save the file as UTF-8\n  at the spec (DIR/bad.yaml)"
-    bad.write_bytes(b" " * 1_000_001)
-    assert refusal(bad) == "expected a spec of at most 1,000,000 bytes, got a larger file\n  at the spec (DIR/bad.yaml)"
+    bad.write_bytes(b" " * 300_001)
+    assert refusal(bad) == "expected a spec of at most 300,000 bytes, got a larger file\n  at the spec (DIR/bad.yaml)"
     assert refusal(tmp_path / "none.yaml") == (
         "cannot read the spec: No such file or directory; check the path\n  at the spec (DIR/none.yaml)"
     )
