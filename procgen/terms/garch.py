@@ -160,18 +160,13 @@ class Garch(Term):
         weights = self._weights()
         if _sum(weights) < 1.0:
             return decay_length(companion(weights, (), len(weights), 0)[0])
-        # Without a variance: E(β + αz²)^s < 1 for some s < 1 bounds how long the start is felt. The
-        # expectation is rounded up to a power of two, which no rounding of it can move.
+        # Without a variance: E(β + αz²)^s < 1 for some s < 1 bounds how long the start is felt. The length is
+        # rounded up to a power of two, which no rounding of the expectation can move.
+        beta = self.beta[0] if self.beta else 0.0
         factor = min(
-            self.law.expect(lambda z, s=s: (self.beta[0] + self.alpha[0] * z * z) ** s)
-            if self._first_order()
-            else 0.999
-            for s in (0.05, 0.1, 0.25, 0.5, 0.75)
+            self.law.expect(lambda z, s=s: (beta + self.alpha[0] * z * z) ** s) for s in (0.05, 0.1, 0.25, 0.5, 0.75)
         )
         return 2 ** min(16, math.ceil(math.log2(math.log(1e-12) / math.log(factor))))
-
-    def _first_order(self):
-        return len(self.alpha) == 1 and len(self.beta) == 1
 
     def reach(self, head):
         return (max(self.burn(), head),)
@@ -260,16 +255,22 @@ class Arch(Garch):
 
 def _without_variance(values, alpha, beta, persistence):
     """What to say of alpha + beta >= 1: not stationary at all, or stationary without a variance."""
-    if len(alpha) == len(beta) == 1 or (len(alpha) == 1 and not beta):
-        b = beta[0] if beta else 0.0
-        exponent = values["law"].expect(lambda z: np.log(b + alpha[0] * z * z))
-        if exponent >= 0:
-            yield (
-                "alpha",
-                f"expected E log(β + αz²) below 0 for a stationary garch, got {exponent:.4g}; lower alpha or beta",
-            )
-            return
-    if not values["allow_infinite_variance"]:
+    if len(alpha) > 1 or len(beta) > 1:
+        yield (
+            "alpha",
+            f"alpha + beta must be below 1, got {number(persistence)}: without a variance, stationarity can be told "
+            "only for one alpha and one beta; lower one, or give `before` to leave from a known variance",
+        )
+        return
+    b = beta[0] if beta else 0.0
+    exponent = values["law"].expect(lambda z: np.log(b + alpha[0] * z * z))
+    if exponent >= 0:
+        yield (
+            "alpha",
+            f"expected E log(β + αz²) below 0 for a stationary garch, got {exponent:.4g}; lower alpha or beta, or give "
+            "`before` to leave from a known variance",
+        )
+    elif not values["allow_infinite_variance"]:
         yield (
             "alpha",
             f"alpha + beta must be below 1 for a finite variance, got {number(persistence)}; lower one, or say "

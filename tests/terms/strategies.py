@@ -1,0 +1,112 @@
+"""Hypothesis strategies made from the declarations: any parameter, any term, any body, any small spec."""
+
+from __future__ import annotations
+
+import numpy as np
+from hypothesis import strategies as st
+
+from procgen.chance.laws import LAWS
+from procgen.spec import declare
+from procgen.terms import catalogue
+
+LABELS = iter(())
+
+
+def numbers(domain) -> st.SearchStrategy[float]:
+    """Numbers of moderate size within the bounds of a Real."""
+    lows = [v for v in (domain.above, domain.at_least) if v is not None]
+    highs = [v for v in (domain.below, domain.at_most) if v is not None]
+    low, high = max(lows, default=-4.0), min(highs, default=4.0)
+    return st.floats(low, max(high, low), allow_nan=False).map(lambda x: round(x, 3)).filter(domain.holds)
+
+
+def value_of(parameter: declare.Parameter) -> st.SearchStrategy:
+    """What may be written for a parameter, as YAML data."""
+    domain = parameter.domain
+    if parameter.name in ("phi", "theta"):
+        return partials().map(coefficients)
+    if isinstance(domain, declare.Real):
+        return numbers(domain)
+    if isinstance(domain, declare.Whole):
+        low = domain.at_least or 0
+        return st.integers(low, low + 6)
+    if isinstance(domain, declare.Reals):
+        return st.lists(numbers(domain.each), min_size=max(1, domain.min_length), max_size=3)
+    if isinstance(domain, declare.Choice):
+        return st.sampled_from(domain.words)
+    if isinstance(domain, declare.Flag):
+        return st.booleans()
+    if isinstance(domain, declare.Span):
+        return st.integers(1, 30)
+    if isinstance(domain, declare.Moment):
+        return st.integers(-30, 30)
+    if isinstance(domain, declare.LawOf):
+        return laws()
+    if isinstance(domain, declare.Records):
+        return st.lists(mapping(domain.parameters), min_size=1, max_size=2)
+    if isinstance(domain, declare.Record):
+        return mapping(domain.parameters)
+    return st.text("abc", min_size=1, max_size=3)
+
+
+def mapping(parameters) -> st.SearchStrategy[dict]:
+    """A mapping with every required parameter and some of the optional ones."""
+    required = {p.name: value_of(p) for p in parameters if p.default is declare.REQUIRED}
+    optional = {p.name: value_of(p) for p in parameters if p.default is not declare.REQUIRED}
+    return st.fixed_dictionaries(required, optional=optional)
+
+
+def laws() -> st.SearchStrategy:
+    return st.sampled_from(sorted(LAWS)).flatmap(
+        lambda name: mapping(LAWS[name].parameters).map(lambda values: {name: values} if values else name)
+    )
+
+
+def partials(most: int = 4) -> st.SearchStrategy[list[float]]:
+    """Partial autocorrelations, so that polynomials near the border of stationarity come up."""
+    return st.lists(st.floats(-0.95, 0.95).map(lambda x: round(x, 3)), min_size=1, max_size=most)
+
+
+def coefficients(partial: list[float]) -> list[float]:
+    """The stationary AR polynomial of some partial autocorrelations (Durbin-Levinson)."""
+    phi: list[float] = []
+    for k in partial:
+        phi = [c - k * d for c, d in zip(phi, phi[::-1], strict=True)] + [k]
+    return [float(np.round(c, 6)) for c in phi]
+
+
+@st.composite
+def entries(draw, depth: int = 2) -> dict:
+    """An entry of any kind: a term, or a composition of entries."""
+    kinds = [kind for kind, term in catalogue().items() if kind != "use" and (depth or not term.composition)]
+    kind = draw(st.sampled_from(kinds))
+    term = catalogue()[kind]
+    plain = [p for p in term.parameters if not isinstance(p.domain, declare.Body)]
+    values = draw(mapping(plain))
+    for parameter in term.parameters:
+        if isinstance(parameter.domain, declare.Body):
+            values[parameter.name] = draw(st.lists(entries(depth - 1), min_size=1, max_size=2))
+    if term.takes_shock:
+        for name in ("sd", "total_sd"):
+            values.pop(name, None)
+        values["sd"] = draw(st.floats(0.1, 2).map(lambda x: round(x, 2)))
+    entry = {kind: values, "as": f"n{draw(st.integers(0, 10**6))}"}
+    if draw(st.booleans()):
+        entry["times"] = draw(st.sampled_from([0.5, -1.0, 2.0]))
+    return entry
+
+
+@st.composite
+def specs(draw) -> dict:
+    """A spec with a shared body and one to three series of any terms, some of them reading each other."""
+    names = ["a", "b", "c"][: draw(st.integers(1, 3))]
+    series = {}
+    for name in names:
+        body = draw(st.lists(entries(), min_size=1, max_size=2))
+        readable = ["w", *series]
+        if draw(st.booleans()):
+            body.append({"use": draw(st.sampled_from(readable))})
+        series[name] = body
+    steps = draw(st.integers(1, 40))
+    shared = {"w": [draw(entries(0))]}
+    return {"procgen": 1, "seed": 5, "paths": 20, "time": {"steps": steps}, "shared": shared, "series": series}
