@@ -143,7 +143,9 @@ class Table:
 
     def _steps(self, frame: pd.DataFrame, names: Names, path: NDArray) -> NDArray[np.int64]:
         if names.step is not None:
-            return self._numbered(frame[names.step], names.step)
+            column = frame[names.step]
+            numeric = column.dtype.kind in "iuf" or not _looks_like_times(column)
+            return self._numbered(column, names.step) if numeric else self._timed(column, names.step)
         if names.time is not None:
             return self._timed(frame[names.time], names.time)
         self._say("step order", "no column of steps or times: rows of a path are taken in their order", "reported")
@@ -244,6 +246,14 @@ class Table:
 
     def _say(self, what: str, note: str, outcome: str) -> None:
         self._checks.append(Check("", what, "all rows", "structure", outcome=outcome, note=note))
+
+
+def _looks_like_times(column: pd.Series) -> bool:
+    """Whether a column given as the step holds stamps, as dates or as text such as 2027-01-04 00:15."""
+    if column.dtype.kind == "M":
+        return True
+    first = str(column.iloc[0])
+    return not first.strip().lstrip("+-").replace(".", "", 1).isdigit() and any(c in first for c in "-:/")
 
 
 def _codes(column: pd.Series) -> tuple[NDArray[np.int64], list[Any]]:

@@ -54,22 +54,21 @@ def validate(
     if not 0 < false_alarm < 1:
         raise ValueError(f"expected a false-alarm probability between 0 and 1, got {false_alarm}")
     origin = source.origin(data, spec, columns)
-    plan = plan_of(origin.spec, origin.steps)
-    gather, faults = _pass(plan, origin, progress)
-    rows = [*origin.checks(), *faults, *judged(gather)]
-    return Verdict(rows, false_alarm, origin.about())
+    gather = gathered(plan_of(origin.spec, origin.steps), origin.blocks(), progress, origin.rows)
+    return Verdict([*origin.checks(), *origin.faults, *judged(gather)], false_alarm, origin.about())
 
 
-def _pass(plan: Plan, origin: Any, progress: Tick | None) -> tuple[Gather, list[Check]]:
+def gathered(plan: Plan, blocks: Blocks, progress: Tick | None = None, rows: int = 0) -> Gather:
+    """The sums of one pass over blocks (first_path, first_step, {series: (paths, steps)})."""
     gather = Gather(plan)
     done = 0
-    for first_path, first_step, values in origin.blocks():
+    for first_path, first_step, values in blocks:
         gather.absorb(first_path, first_step, values)
         if progress is not None:
             done += values[plan.names[0]].size
-            progress(done, origin.rows)
+            progress(done, rows)
     gather.finish()
-    return gather, origin.faults
+    return gather
 
 
 def plan_of(spec: Any, steps: int | None = None) -> Plan:

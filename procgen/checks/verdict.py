@@ -147,6 +147,12 @@ class Verdict:
             "checks": [row.row() for row in self.rows],
         }
 
+    def to_json(self) -> str:
+        """The verdict as JSON text."""
+        import json
+
+        return json.dumps(self.to_dict(), ensure_ascii=False, allow_nan=False)
+
     def to_text(self, rows: int = 8) -> str:
         """The verdict for a terminal, with the `rows` smallest p."""
         from procgen.report.text import verdict_text

@@ -1,0 +1,144 @@
+"""A verdict as text for a terminal."""
+
+from __future__ import annotations
+
+import math
+from collections import Counter
+from collections.abc import Iterator, Sequence
+from typing import TYPE_CHECKING
+
+if TYPE_CHECKING:
+    from procgen.checks.verdict import Check, Verdict
+
+CAUTION = (
+    "These are scenarios of a stated model, not forecasts and not advice. That paths behave as the model says does "
+    "not make the model right; they do not replace the rules that bind you or the judgement of a licensed professional."
+)
+_SAYS = {
+    "agrees": "AGREES: nothing departs from what the spec states",
+    "departs": "DEPARTS from what the spec states",
+    "untestable": "CANNOT BE JUDGED: no check could be made",
+}
+_BAR = 12
+
+
+def number(x: float | None, digits: int = 5) -> str:
+    """A number in few letters; a dash for what is not known."""
+    if x is None or not math.isfinite(x):
+        return "–" if x is None or math.isnan(x) else ("∞" if x > 0 else "−∞")
+    return f"{x:.{digits}g}".replace("-", "−")
+
+
+def table(head: Sequence[str], rows: Sequence[Sequence[str]], left: Sequence[int] = (0,)) -> list[str]:
+    """Lines of a table with aligned columns; the columns in `left` are flush left, the others flush right."""
+    widths = [max(len(row[k]) for row in [head, *rows]) for k in range(len(head))]
+
+    def line(cells: Sequence[str]) -> str:
+        padded = [c.ljust(w) if k in left else c.rjust(w) for k, (c, w) in enumerate(zip(cells, widths, strict=True))]
+        return "  ".join(padded).rstrip()
+
+    return [line(head), *map(line, rows)]
+
+
+def verdict_text(verdict: Verdict, rows: int = 8) -> str:
+    """Verdict and counts, departures in words, the smallest p, what could have been seen, what was not judged."""
+    lines = [_SAYS[verdict.verdict]]
+    lines += [f"  {line}" for line in verdict.headline]
+    lines += ["", *_counts(verdict)]
+    judged = [row for row in verdict.rows if row.log_p is not None][:rows]
+    if judged:
+        lines += ["", "Smallest p (bar: −log₁₀ p; │ marks the level that one check alone must pass)"]
+        lines += _worst(judged, verdict)
+    seen = list(_detectable(verdict.rows))
+    if seen:
+        lines += ["", "Smallest departures that would have been found 9 times in 10:"]
+        lines += [f"  {line}" for line in seen]
+    left = list(_not_judged(verdict.rows))
+    if left:
+        lines += ["", "Not judged:"]
+        lines += [f"  {line}" for line in left]
+    return "\n".join([*lines, "", *_wrapped(CAUTION)])
+
+
+def _counts(verdict: Verdict) -> list[str]:
+    counts = ", ".join(f"{count} {what}" for what, count in sorted(verdict.counts.items()))
+    about = verdict.about
+    size = f"{about['paths']:,} paths × {about['steps']:,} steps; " if "paths" in about else ""
+    return [
+        f"{size}{len(verdict.rows)} checks: {counts}",
+        f"a true ensemble is called departing at most {number(verdict.false_alarm)} of the time (Holm)",
+    ]
+
+
+def _worst(rows: Sequence[Check], verdict: Verdict) -> list[str]:
+    family = max(1, sum(row.log_p is not None for row in verdict.rows))
+    level = -math.log10(verdict.false_alarm / family)
+    head = ("", "series", "check", "at", "theory", "estimate", "p")
+    cells = [
+        (
+            bar(row.log_p, level), row.series, row.what, row.probe, number(row.theory), number(row.estimate),
+            p_text(row.log_p),
+        )
+        for row in rows
+    ]  # fmt: skip
+    return ["  " + line for line in table(head, cells, left=(0, 1, 2, 3))]
+
+
+def bar(log_p: float, level: float) -> str:
+    """−log₁₀ p as a bar of _BAR letters with the level marked."""
+    size = -log_p / math.log(10)
+    mark = _BAR * 2 // 3
+    filled = min(_BAR, round(size / level * mark))
+    return "".join("│" if k == mark and filled <= mark else ("█" if k < filled else "·") for k in range(_BAR))
+
+
+def p_text(log_p: float) -> str:
+    """p in few letters, also far below what a float can hold."""
+    if log_p > math.log(1e-4):
+        return f"{math.exp(log_p):.4f}"
+    power = log_p / math.log(10)
+    return f"1e{math.floor(power):d}".replace("-", "−")
+
+
+_IN_WORDS = {
+    "shocks: mean": "a shift of all shocks by {} of their sd",
+    "shocks: variance": "a shock variance off by a factor of 1 ± {}",
+    "shocks: autocorrelation": "a correlation of {} between shocks of one path",
+    "shocks: clustering": "a correlation of {} between the sizes of shocks of one path",
+    "shocks: neighbouring paths": "a correlation of {} between shocks of neighbouring paths",
+    "shocks: correlation between series": "a correlation between series' shocks off by {}",
+    "mean": "a mean off by {}",
+    "variance": "a variance off by {}",
+    "covariance": "a covariance off by {}",
+}
+
+
+def _detectable(rows: Sequence[Check]) -> Iterator[str]:
+    """For each series the sharpest detectable size of each sort, in words."""
+    found: dict[str, dict[str, float]] = {}
+    for row in rows:
+        if row.what in _IN_WORDS and row.detectable is not None:
+            mine = found.setdefault(row.series, {})
+            mine[row.what] = min(mine.get(row.what, math.inf), row.detectable)
+    for series, sizes in found.items():
+        if any(what.startswith("shocks") for what in sizes):
+            sizes = {what: size for what, size in sizes.items() if what.startswith("shocks")}
+        text = "; ".join(_IN_WORDS[what].format(number(size, 2)) for what, size in sizes.items())
+        yield f"{series}: {text}"
+
+
+def _not_judged(rows: Sequence[Check]) -> Iterator[str]:
+    """Reasons, with the checks that they stopped."""
+    groups: dict[tuple[str, str], Counter[str]] = {}
+    for row in rows:
+        if row.outcome in ("untestable", "reported"):
+            groups.setdefault((row.series, row.note), Counter())[row.what] += 1
+    for (series, note), whats in groups.items():
+        parts = ", ".join(f"{what} ×{count}" if count > 1 else what for what, count in whats.items())
+        yield f"{series + ': ' if series else ''}{parts}: {note}"
+
+
+def _wrapped(text: str, width: int = 100) -> list[str]:
+    from textwrap import wrap
+
+    return wrap(text, width)
