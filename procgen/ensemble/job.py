@@ -74,7 +74,7 @@ def render(
     if max(whole.end_path, whole.steps) > MOST:
         raise EnsembleError(f"expected at most {MOST} paths and steps, got {whole}")
     if out is None:
-        return _in_memory(spec, source, whole, progress)
+        return _in_memory(source, whole, progress)
     job = Job(spec, source, whole, Folder(Path(out)), names, layout, factory)
     return job.run(_workers(workers, whole.rows * len(source.columns)), resume, overwrite, progress)
 
@@ -105,7 +105,7 @@ def _reveal(spec: Any, reveal: Sequence[str] | str | None) -> tuple[str, ...]:
     return tuple(dict.fromkeys(reveal))
 
 
-def _in_memory(spec: Any, source: Source, whole: Block, progress: Progress | None) -> Memory:
+def _in_memory(source: Source, whole: Block, progress: Progress | None) -> Memory:
     need, free = whole.rows * row_bytes(source.columns), _free_memory()
     if free is not None and need > free:
         raise EnsembleError(
@@ -129,7 +129,7 @@ def _in_memory(spec: Any, source: Source, whole: Block, progress: Progress | Non
         if batch.end_step == whole.end_step:
             drawer.forget()
     stored = {column.name: store(values.pop(column.name), column) for column in source.columns}
-    return Memory(stored, source.columns, whole, source.stamps, spec)
+    return Memory(stored, source.columns, whole, source.stamps, source)
 
 
 def _free_memory() -> int | None:
