@@ -25,12 +25,12 @@ SpecFile = Annotated[Path, typer.Argument(metavar="SPEC", help="The spec, a YAML
 Json = Annotated[bool, typer.Option("--json", help="Print JSON instead of text.")]
 
 
-def numbers(text: str) -> tuple[int, ...]:
-    """Whole numbers from `0,1,10`."""
-    try:
-        return tuple(int(part) for part in text.split(","))
-    except ValueError:
-        raise typer.BadParameter(f"expected whole numbers such as 0,1,10, got {text!r}") from None
+def steps_of(text: str) -> tuple[int, ...]:
+    """Steps from `0,1,10`."""
+    parts = [part.strip() for part in text.split(",")]
+    if not all(part.isdecimal() and len(part) <= 12 for part in parts):
+        raise typer.BadParameter(f"expected steps from 0 on, such as 0,1,10, got {text!r}")
+    return tuple(int(part) for part in parts)
 
 
 @app.command(
@@ -111,6 +111,7 @@ def validate(
     Ends with exit code 0 when they agree, 1 when they depart, 2 when it cannot be judged.
     """
     import procgen as pg
+    from procgen.report.rendered import verdict_json
 
     columns = {role: name for role, name in (("path", path_col), ("step", step_col)) if name is not None}
     stated = None if spec is None else pg.load(spec)
@@ -118,7 +119,7 @@ def validate(
         verdict = pg.validate(data, stated, false_alarm, columns or None, tick)
     if report is not None:
         verdict.to_html(report)
-    printed(verdict.to_json() if json else verdict.to_text())
+    printed(verdict_json(verdict) if json else verdict.to_text())
     raise typer.Exit({True: 0, False: 1, None: 2}[verdict.agrees])
 
 
@@ -132,7 +133,7 @@ def theory(
     json: Json = False,
     at: Annotated[
         tuple | None,
-        typer.Option(parser=numbers, metavar="0,1,10", help="Steps at which to give mean and variance."),
+        typer.Option(parser=steps_of, metavar="0,1,10", help="Steps at which to give mean and variance."),
     ] = None,
     lags: Annotated[
         int, typer.Option(metavar="N", help="Largest lag of the autocovariances.", min=0, max=100_000)

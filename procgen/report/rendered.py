@@ -1,10 +1,12 @@
-"""What `render` says at its end."""
+"""What `render` and `validate --json` print at their end."""
 
 from __future__ import annotations
 
+import json
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
+    from procgen.checks.verdict import Verdict
     from procgen.ensemble.ensemble import OnDisk
 
 
@@ -23,3 +25,8 @@ def rendered(ensemble: OnDisk) -> str:
     if not ensemble.manifest.portable:
         lines.append(f"not the same bits on every machine: {ensemble.manifest.why_not_portable}")
     return "\n".join(lines)
+
+
+def verdict_json(verdict: Verdict) -> str:
+    """A verdict and all its checks as JSON."""
+    return json.dumps(verdict.to_dict(), ensure_ascii=False)
