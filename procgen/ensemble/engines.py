@@ -16,11 +16,11 @@ from collections import deque
 from collections.abc import Callable, Sequence
 from typing import Any
 
-from procgen.ensemble.errors import EnsembleError
+from procgen.ensemble.errors import EnsembleError, system_sentence
 from procgen.ensemble.part import Task, render_chain
 
 Progress = Callable[[int, int], None]  # (rows drawn so far, rows in all)
-WORTH = 2_000_000  # values that repay one more process
+WORTH = 4_000_000  # values that repay one more process
 
 
 def processors() -> int:
@@ -88,8 +88,10 @@ def run(
     chain that failed, or when a worker died; KeyboardInterrupt passes through after the workers have ended.
     """
     crew = Crew(tasks, progress, done, rows)
-    helpers = [Helper(crew, inherit) for _ in range(min(workers, len(tasks)) - 1)]
+    helpers: list[Helper] = []
     try:
+        for _ in range(min(workers, len(tasks)) - 1):
+            helpers.append(Helper(crew, inherit))
         while (task := crew.next()) is not None:
             crew.keep(render_chain(task, crew.tick))
         while crew.error is None and any(helper.is_alive() for helper in helpers):
@@ -98,9 +100,8 @@ def run(
             crew.show()
     except Stopped:
         pass
-    except BaseException as error:
-        crew.fail(error)
-        raise
+    except OSError as error:
+        raise EnsembleError(system_sentence(error, "starting a worker process")) from None
     finally:
         for helper in helpers:
             helper.end()

@@ -109,9 +109,12 @@ class Folder:
     def clean_state(self, keep_plan: bool) -> None:
         """Remove what earlier renders left in .state: all but the lock and, when asked, plan and states."""
         for entry in self.state.iterdir():
-            kept = entry.name == "lock" or (keep_plan and entry.suffix in (".json", ".npz"))
-            if not kept:
+            if entry.name == "lock" or (keep_plan and entry.suffix in (".json", ".npz")):
+                continue
+            try:
                 shutil.rmtree(entry) if entry.is_dir() and not entry.is_symlink() else entry.unlink()
+            except OSError as error:
+                raise EnsembleError(system_sentence(error, f"removing {entry}")) from None
 
     @contextlib.contextmanager
     def locked(self) -> Iterator[int | None]:
@@ -159,7 +162,7 @@ class Folder:
 
     def finish(self) -> None:
         """Remove .state, its lock last; to be called while the lock is held."""
-        with contextlib.suppress(OSError):
+        with contextlib.suppress(OSError, EnsembleError):
             self.clean_state(keep_plan=False)
             (self.state / "lock").unlink(missing_ok=True)
             self.state.rmdir()
