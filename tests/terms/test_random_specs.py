@@ -18,7 +18,7 @@ from .helpers import draw
 from .strategies import specs
 
 QUIET = settings(
-    max_examples=60,
+    max_examples=40,
     deadline=None,
     derandomize=True,
     suppress_health_check=[HealthCheck.too_slow, HealthCheck.filter_too_much],
@@ -65,4 +65,4 @@ def test_theory_gives_a_number_or_a_reason(raw):
     for series in said["series"].values():
         assert series["stationarity"]["verdict"] and series["stationarity"]["reasons"]
         for name in ("mean", "variance"):
-            assert series[name] is not None or any(name in key for key in series if "reason" in key)
+            assert series[name] is not None or len(series["unknown"][name]) > 10
