@@ -150,8 +150,9 @@ class EnsembleOrigin:
             self.faults.append(Check.fact("", "rows in order", "all parts", "", "every path and step once, in order"))
             self.faults.append(Check.fact("", "digest", "all parts", "", note))
             return
-        result = check_digest(self.ensemble.path)
+        result = check_digest(self.ensemble.path, redraw=True)
         damages = result.damages or ("the values are not those that the manifest records",)
-        for damage in damages[:3]:
-            series = getattr(damage, "series", None) or ""
-            self.faults.append(Check.fact(series, "digest", "all parts", str(damage)))
+        first = f"; first difference: {result.difference}" if result.difference else ""
+        for k, damage in enumerate(damages[:3]):
+            series = getattr(damage, "series", None) or (result.difference.series if result.difference else "")
+            self.faults.append(Check.fact(series, "digest", "all parts", str(damage) + (first if k == 0 else "")))

@@ -197,19 +197,16 @@ def _rank(row: Check) -> tuple[int, float]:
     return order[row.outcome], row.log_p if row.log_p is not None else 0.0
 
 
-def headline(rows: Sequence[Check], most: int = 6) -> list[str]:
-    """Departures by series and kind in plain words, structure first, then the largest disagreement first."""
+def headline(rows: Sequence[Check], most: int = 8) -> list[str]:
+    """A line a series that departs, the largest disagreement first; what is wrong with the structure before all."""
     from procgen.checks.words import sentence
 
-    groups: dict[tuple[str, str], list[Check]] = {}
-    for row in rows:
+    series: dict[tuple[bool, str], dict[str, list[Check]]] = {}
+    for row in sorted(rows, key=_strength):
         if row.outcome == "departs":
-            groups.setdefault((row.series, row.kind), []).append(row)
-    order = sorted(groups.values(), key=lambda group: (group[0].kind != "structure", min(map(_strength, group))))
-    lines = [sentence(sorted(group, key=_strength)) for group in order[:most]]
-    if len(order) > most:
-        lines.append(f"and {len(order) - most} more kinds of departure, see the table")
-    return lines
+            series.setdefault((row.kind != "structure", row.series), {}).setdefault(row.kind, []).append(row)
+    lines = [sentence(list(series[key].values())) for key in sorted(series, key=lambda key: key[0])]
+    return lines[:most] + ([f"and {len(lines) - most} more series, see the table"] if len(lines) > most else [])
 
 
 def _strength(row: Check) -> float:

@@ -7,6 +7,8 @@ from collections import Counter
 from collections.abc import Iterator, Sequence
 from typing import TYPE_CHECKING
 
+from procgen.checks.words import number, p_text
+
 if TYPE_CHECKING:
     from procgen.checks.verdict import Check, Verdict
 
@@ -20,13 +22,6 @@ _SAYS = {
     "untestable": "CANNOT BE JUDGED: no check could be made",
 }
 _BAR = 12
-
-
-def number(x: float | None, digits: int = 5) -> str:
-    """A number in few letters; a dash for what is not known."""
-    if x is None or not math.isfinite(x):
-        return "–" if x is None or math.isnan(x) else ("∞" if x > 0 else "−∞")
-    return f"{x:.{digits}g}".replace("-", "−")
 
 
 def table(head: Sequence[str], rows: Sequence[Sequence[str]], left: Sequence[int] = (0,)) -> list[str]:
@@ -90,14 +85,6 @@ def bar(log_p: float, level: float) -> str:
     mark = _BAR * 2 // 3
     filled = min(_BAR, round(size / level * mark))
     return "".join("│" if k == mark and filled <= mark else ("█" if k < filled else "·") for k in range(_BAR))
-
-
-def p_text(log_p: float) -> str:
-    """p in few letters, also far below what a float can hold."""
-    if log_p > math.log(1e-4):
-        return f"{math.exp(log_p):.4f}"
-    power = log_p / math.log(10)
-    return f"1e{math.floor(power):d}".replace("-", "−")
 
 
 _IN_WORDS = {
