@@ -56,9 +56,10 @@ class Drawer:
                 raise EnsembleError(f"no state to go on from before {block}; draw its chain from step 0")
         return self._runs[key]
 
-    def forget(self) -> None:
-        """Drop the runs; to be called when they have reached the last step."""
-        self._runs.clear()
+    def forget(self, batch: Block) -> None:
+        """Drop the runs of a batch; to be called when they have reached the last step."""
+        for key in [key for key in self._runs if batch.first_path <= key[0] < batch.end_path]:
+            del self._runs[key]
 
     def state(self) -> State:
         """The carried state of every run, as named arrays."""

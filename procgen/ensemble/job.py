@@ -127,7 +127,7 @@ def _in_memory(source: Source, whole: Block, progress: Progress | None) -> Memor
         span = slice(batch.first_step, batch.end_step)
         drawer.fill(batch, {name: data[rows, span] for name, data in values.items()})
         if batch.end_step == whole.end_step:
-            drawer.forget()
+            drawer.forget(batch)
     stored = {column.name: store(values.pop(column.name), column) for column in source.columns}
     return Memory(stored, source.columns, whole, source.stamps, source)
 

@@ -100,7 +100,7 @@ def _render_part(task: Task, part: Block, source: Source, drawer: Drawer, folder
                 digests.add(batch, buffers, stored)
                 writer.write(batch, stored)
                 if last and batch.end_step == part.end_step:
-                    drawer.forget()
+                    drawer.forget(batch)
             writer.nodes = digests.packed(task.whole)
         if not last:
             folder.save_state(name, drawer.state())

@@ -39,11 +39,14 @@ def test_tiles_give_one_digest(monkeypatch, memory):
     assert fake_render(SPEC).digest == memory.digest
 
 
-def test_parts_in_both_directions_carry_the_state(tmp_path, monkeypatch):
+@pytest.mark.parametrize("buffer_bytes", [1 << 27, 1 << 22, 1 << 18])
+def test_parts_in_both_directions_carry_the_state(tmp_path, monkeypatch, buffer_bytes):
+    """Also when a part is drawn in several batches: of paths, or of pieces of one path."""
     spec = fake_spec(paths=35, steps=2 * STEPS + 100)
     whole = fake_render(spec)
     monkeypatch.setattr(plan, "PART_BYTES", 1 << 22)
-    ens = fake_render(spec, tmp_path, workers=2)
+    monkeypatch.setattr(plan, "BUFFER_BYTES", buffer_bytes)
+    ens = fake_render(spec, tmp_path, workers=1)
     assert len(ens.manifest.parts) == 9
     assert {part.block.first_step for part in ens.manifest.parts} == {0, STEPS, 2 * STEPS}
     assert ens.digest == whole.digest
