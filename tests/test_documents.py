@@ -1,0 +1,117 @@
+"""What the documents show is what the commands print, and the code that they show runs.
+
+    python -m tests.test_documents
+
+writes the shown output again. A block begins with its command; `[...]` as the last line stands for what is left out.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import re
+import shutil
+import tempfile
+from collections.abc import Iterator
+from pathlib import Path
+
+import numpy as np
+import pytest
+from typer.testing import CliRunner
+
+import procgen as pg
+from procgen.chance.laws import LAWS
+from procgen.cli import app
+from procgen.spec.reader import read_text
+from procgen.terms import catalogue
+
+ROOT = Path(__file__).parent.parent
+DOCUMENTS = ["README.md", "DEVELOPERS.md"]
+BLOCK = re.compile(r"(?<=```console\n)\$ (.+)\n([^`]*)(?=```)")
+LEFT_OUT = "[...]"
+# What depends on the version of the library that writes Parquet.
+SIZE = re.compile(r"(\d+ files?), [\d.]+ [kMG]?B, ")
+
+
+def output(command: str, folder: Path) -> str:
+    """What a command prints when it is run in `folder`, standard error behind standard output."""
+    program, *arguments = command.split()
+    if program == "cat":
+        return (folder / arguments[0]).read_text(encoding="utf-8")
+    assert program == "procgen", command
+    found = CliRunner().invoke(app, arguments)
+    return found.stdout + found.stderr
+
+
+def shown_like(printed: str, shown: str) -> str:
+    """As much of what is printed as the document shows."""
+    lines = shown.splitlines()
+    if lines[-1:] == [LEFT_OUT]:
+        return "\n".join([*printed.splitlines()[: len(lines) - 1], LEFT_OUT]) + "\n"
+    return printed
+
+
+def fresh(page: str, folder: Path) -> Iterator[tuple[re.Match[str], str]]:
+    """Every block of a page with its output made anew, in order."""
+    for found in BLOCK.finditer(page):
+        yield found, shown_like(output(found[1], folder), found[2])
+
+
+def workplace(folder: Path) -> Path:
+    """A folder with the specs and the demo, as a checkout has them."""
+    for name in ("specs", "demo"):
+        shutil.copytree(ROOT / name, folder / name)
+    return folder
+
+
+@pytest.mark.parametrize("document", DOCUMENTS)
+def test_shown_output_is_what_the_command_prints(document, tmp_path, monkeypatch):
+    monkeypatch.chdir(workplace(tmp_path))
+    page = (ROOT / document).read_text(encoding="utf-8")
+    for found, printed in fresh(page, tmp_path):
+        assert SIZE.sub(r"\1, ", found[2]) == SIZE.sub(r"\1, ", printed), f"{document}: $ {found[1]}"
+
+
+def test_the_python_of_the_readme_runs(tmp_path, monkeypatch):
+    monkeypatch.chdir(workplace(tmp_path))
+    page = (ROOT / "README.md").read_text(encoding="utf-8")
+    names: dict[str, object] = {}
+    exec(page.partition("```python\n")[2].partition("```")[0], names)
+    # AR(1): σ²/(1 − φ²) (Box & Jenkins 1970, ch. 3).
+    assert names["variance"] == pytest.approx([9 / (1 - 0.64)] * 2)
+    assert names["verdict"].agrees is True
+
+
+def test_the_term_of_the_developers_page_is_one(monkeypatch):
+    page = (ROOT / "DEVELOPERS.md").read_text(encoding="utf-8")
+    names: dict[str, object] = {}
+    exec(page.partition("```python\n")[2].partition("```")[0], names)
+    term = names["Pulse"]
+    kinds = {**catalogue(), term.kind: term}
+    monkeypatch.setattr("procgen.terms.graph.catalogue", lambda: kinds)
+    series = f"x: [{{{term.example}}}, {{white_noise: {{sd: 1}}}}]"
+    text = f"procgen: 1\nseed: 1\npaths: 200\ntime: {{steps: 40}}\nseries:\n  {series}\n"
+    spec = read_text(text, kinds, LAWS)
+    mean = pg.theory(spec)["x"].mean(np.arange(40))
+    assert mean.tolist() == [5.0 if 12 <= step < 18 else 0.0 for step in range(40)]
+    difference = pg.render(spec)["x"] - pg.render(read_text(text.replace("size: 5", "size: 0"), kinds, LAWS))["x"]
+    assert difference == pytest.approx(np.tile(mean, (200, 1)))  # all other draws are as they were
+
+
+def test_links_lead_somewhere():
+    for document in [*DOCUMENTS, "specs/README.md"]:
+        page = (ROOT / document).read_text(encoding="utf-8")
+        for target in re.findall(r"\]\(([^)#:]+)(?:#[^)]*)?\)", page):
+            assert (ROOT / document).parent.joinpath(target).exists(), f"{document}: {target}"
+
+
+def rewritten(page: str) -> str:
+    """The page with its shown output made anew."""
+    with tempfile.TemporaryDirectory() as folder, contextlib.chdir(workplace(Path(folder))):
+        made = {found.start(): printed for found, printed in fresh(page, Path(folder))}
+    return BLOCK.sub(lambda found: f"$ {found[1]}\n{made[found.start()]}", page)
+
+
+if __name__ == "__main__":
+    for document in DOCUMENTS:
+        page = (ROOT / document).read_text(encoding="utf-8")
+        (ROOT / document).write_text(rewritten(page), encoding="utf-8")
