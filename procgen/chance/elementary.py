@@ -69,6 +69,14 @@ def log(x, out: np.ndarray | None = None) -> np.ndarray:
     return blockwise(log_of, x, out)
 
 
+def log1p(x, out: np.ndarray | None = None) -> np.ndarray:
+    """log(1 + x), elementwise, for x > -1, within 3 ulp also for small x; nan below -1.
+
+    log(1 + x) x / ((1 + x) - 1), both with the same rounded 1 + x (Goldberg 1991, theorem 4).
+    """
+    return blockwise(_log1p, x, out)
+
+
 def sin_turns(x, out: np.ndarray | None = None) -> np.ndarray:
     """sin(2 pi x), elementwise, within 2 ulp; exact at multiples of a quarter; nan for nan and infinities."""
     return blockwise(_sin_turns, x, out)
@@ -90,29 +98,30 @@ def horner(coefficients: tuple[float, ...], x: np.ndarray, out: np.ndarray) -> n
 
 
 def _exp(x: np.ndarray, out: np.ndarray, scratch: Scratch) -> None:
-    exp_of_sum(x, None, out, scratch)
+    times_exp(1.0, x, 0.0, out, scratch)
 
 
-def exp_of_sum(x: np.ndarray, low: np.ndarray | None, out: np.ndarray, scratch: Scratch) -> None:
-    """exp(x + low) for |low| far below 1, a correction that x itself is too coarse to hold."""
+def times_exp(
+    factor: np.ndarray | float, x: np.ndarray, low: np.ndarray | float, out: np.ndarray, scratch: Scratch
+) -> None:
+    """factor exp(x + low); low is far below 1, a correction that x itself is too coarse to hold."""
     n = len(x)
     k, high, tail, r, square, p = (scratch(i, n) for i in range(6))
     np.fmin(np.fmax(x, -800.0, out=high), 800.0, out=high)  # nan becomes a bound here, and nan again below
     np.rint(np.multiply(high, _PER_LN2, out=k), out=k)
     np.subtract(high, np.multiply(k, _LN2_HIGH, out=r), out=high)
     np.multiply(k, _LN2_LOW, out=tail)
-    if low is not None:
-        np.subtract(tail, low, out=tail)
+    np.subtract(tail, low, out=tail)
     np.subtract(high, tail, out=r)
     np.multiply(r, r, out=square)
     np.multiply(horner(_EXP, square, p), square, out=p)
-    np.subtract(r, p, out=p)  # c = r - r**2 P(r**2); exp(r) = 1 + (r - (r c / (c - 2)))
+    np.subtract(r, p, out=p)  # c = r - r**2 P(r**2); exp(r) = 1 + r + r c / (2 - c)
     np.multiply(r, p, out=r)
     np.subtract(2.0, p, out=p)
     np.divide(r, p, out=r)
     np.subtract(tail, r, out=r)
     np.subtract(r, high, out=r)
-    np.subtract(1.0, r, out=r)
+    np.subtract(factor, np.multiply(r, factor, out=r), out=r)
     bits = scratch(0, n, np.int64)
     half = scratch(1, n, np.int64)
     np.copyto(bits, k, casting="unsafe")
@@ -149,6 +158,20 @@ def log_of(x: np.ndarray, out: np.ndarray, scratch: Scratch) -> None:
     np.subtract(half, r, out=r)
     np.subtract(r, f, out=r)
     np.subtract(np.multiply(k, _LN2_HIGH, out=k), r, out=out)
+
+
+def _log1p(x: np.ndarray, out: np.ndarray, scratch: Scratch) -> None:
+    n = len(x)
+    above, less, result = scratch(6, n), scratch(7, n), scratch(8, n)
+    np.add(x, 1.0, out=above)
+    np.subtract(above, 1.0, out=less)
+    log_of(above, result, scratch)
+    same = np.flatnonzero((less == 0.0) | (above == np.inf))
+    less[same] = 1.0
+    with np.errstate(invalid="ignore"):
+        np.multiply(result, np.divide(x, less, out=less), out=less)
+    less[same] = np.where(above[same] == np.inf, np.inf, x[same])
+    np.copyto(out, less)
 
 
 def _log_of_odd(x: np.ndarray, out: np.ndarray) -> None:

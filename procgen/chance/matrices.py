@@ -13,7 +13,7 @@ def matmul(a: np.ndarray, b: np.ndarray) -> np.ndarray:
     a, b = np.asarray(a, np.float64), np.asarray(b, np.float64)
     if a.shape[-1] != b.shape[-2]:
         raise ValueError(f"expected inner sizes to agree, got shapes {a.shape} and {b.shape}")
-    total = np.zeros(np.broadcast_shapes(a.shape[:-2], b.shape[:-2]) + (a.shape[-2], b.shape[-1]))
+    total = np.zeros((*np.broadcast_shapes(a.shape[:-2], b.shape[:-2]), a.shape[-2], b.shape[-1]))
     for k in range(a.shape[-1]):
         total += a[..., :, k, None] * b[..., None, k, :]
     return total
@@ -33,7 +33,7 @@ def cholesky(s: np.ndarray) -> np.ndarray:
     lower = np.zeros_like(rest)
     for j in range(size):
         pivot = rest[j, j]
-        if not pivot >= -2.0**20 * bounds[j]:
+        if not pivot >= -(2.0**20) * bounds[j]:
             raise ValueError(
                 f"expected a positive semidefinite matrix, got pivot {pivot:.3g} in row {j}; "
                 "its rows do not fit together as covariances"

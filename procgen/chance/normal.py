@@ -9,7 +9,7 @@ from __future__ import annotations
 import numpy as np
 
 from procgen.chance.blocks import Scratch, blockwise
-from procgen.chance.elementary import exp_of_sum, horner, log_of
+from procgen.chance.elementary import horner, log_of, times_exp
 
 _FAR = 40.0  # the tail area beyond is below the smallest float64
 _TOP_BITS = np.int64(-(2**27))  # keeps 26 significant bits: their square is exact
@@ -43,6 +43,7 @@ _TAIL = (  # F as a polynomial in t = (x - 5) / (x + 5), from a 60-digit Chebysh
 )
 _TAIL_MIDDLE = 0.46151582985003775
 
+
 def normal_quantile(u, out: np.ndarray | None = None) -> np.ndarray:
     """The standard normal quantile of u in (0, 1), elementwise; out may be u itself.
 
@@ -56,37 +57,55 @@ def normal_tail(x, out: np.ndarray | None = None) -> np.ndarray:
 
     For a value of either sign, normal_tail(abs(z)) is the area beyond it on its own side. nan below 0 and for nan.
     """
-    return blockwise(_normal_tail, x, out)
+    return blockwise(normal_tail_of, x, out)
 
 
-def _normal_tail(x: np.ndarray, out: np.ndarray, scratch: Scratch) -> None:
+def normal_tail_of(x: np.ndarray, out: np.ndarray, scratch: Scratch) -> None:
+    """normal_tail of one block; uses the work arrays 0 to 11."""
     n = len(x)
-    near, low, f, t, below, exact = (scratch(i, n) for i in range(6, 12))
+    near, low, f, t, below, part = (scratch(i, n) for i in range(6, 12))
     np.fmin(np.fmax(x, 0.0, out=near), _FAR, out=near)
-    bits = exact.view(np.int64)
-    np.bitwise_and(near.view(np.int64), _TOP_BITS, out=bits)
-    # exp(-x*x/2) with x*x = exact*exact + (x - exact)(x + exact)
-    np.subtract(near, exact, out=low)
-    np.multiply(low, np.add(near, exact, out=t), out=low)
-    np.multiply(low, -0.5, out=low)
-    np.multiply(np.multiply(exact, exact, out=exact), -0.5, out=exact)
-    np.subtract(near, 5.0, out=t)
-    np.divide(t, np.add(near, 5.0, out=below), out=t)
+    np.divide(near, np.add(near, 5.0, out=below), out=t)
+    np.subtract(np.multiply(t, 2.0, out=t), 1.0, out=t)  # (x - 5) / (x + 5), and accurate for small x
     np.multiply(horner(_TAIL, t, below), t, out=t)
     np.add(t, _TAIL_MIDDLE, out=f)
-    # what rounding took from F and from 1 + x goes into the exponent, where it is not lost
+    # What rounding takes from F, 1 + x, their quotient and x*x goes into the exponent, where it is not lost.
     np.subtract(t, np.subtract(f, _TAIL_MIDDLE, out=below), out=t)
-    np.add(low, np.divide(t, f, out=t), out=low)
+    np.divide(t, f, out=low)
     np.add(near, 1.0, out=below)
-    np.divide(f, below, out=f)
     np.subtract(near, np.subtract(below, 1.0, out=t), out=t)
     np.subtract(low, np.divide(t, below, out=t), out=low)
-    exp_of_sum(exact, low, t, scratch)
-    with np.errstate(under="ignore"):
-        np.multiply(t, f, out=f)
-    undefined = np.flatnonzero(np.isnan(x) | (x < 0))
-    f[undefined] = np.nan
-    np.copyto(out, f)
+    quotient = scratch(0, n)
+    np.divide(f, below, out=quotient)
+    np.add(low, np.divide(_residue(f, quotient, below, scratch), f, out=t), out=low)
+    np.copyto(f, quotient)
+    _top_bits(near, part)  # x*x = part*part + (x - part)(x + part)
+    np.subtract(near, part, out=t)
+    np.multiply(t, np.add(near, part, out=below), out=t)
+    np.subtract(low, np.multiply(t, 0.5, out=t), out=low)
+    np.multiply(np.multiply(part, part, out=part), -0.5, out=part)
+    times_exp(f, part, low, t, scratch)
+    t[np.flatnonzero(~(x >= 0.0))] = np.nan
+    np.copyto(out, t)
+
+
+def _top_bits(x: np.ndarray, out: np.ndarray) -> np.ndarray:
+    """x cut to 26 significant bits, so that a product of two such numbers is exact."""
+    np.bitwise_and(x.view(np.int64), _TOP_BITS, out=out.view(np.int64))
+    return out
+
+
+def _residue(value: np.ndarray, a: np.ndarray, b: np.ndarray, scratch: Scratch) -> np.ndarray:
+    """value - a b for a b close to value, but for a few bits of the last place (Dekker 1971)."""
+    n = len(value)
+    a_top, b_top, rest, term = (scratch(i, n) for i in range(1, 5))
+    _top_bits(a, a_top)
+    _top_bits(b, b_top)
+    np.subtract(value, np.multiply(a_top, b_top, out=rest), out=rest)
+    np.subtract(b, b_top, out=term)
+    np.subtract(rest, np.multiply(a_top, term, out=term), out=rest)
+    np.multiply(np.subtract(a, a_top, out=term), b, out=term)
+    return np.subtract(rest, term, out=rest)
 
 
 _CENTRE_TOP = (

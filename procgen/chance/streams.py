@@ -137,9 +137,7 @@ class _Generator:
 
 def _check_address(first_path: int, paths: int, first_step: int, steps: int, out: np.ndarray) -> None:
     if first_path < 0 or paths < 0 or steps < 0:
-        raise ValueError(
-            f"expected first_path, paths and steps of at least 0, got {first_path}, {paths} and {steps}"
-        )
+        raise ValueError(f"expected first_path, paths and steps of at least 0, got {first_path}, {paths} and {steps}")
     if first_path + paths > 2**62 or max(abs(first_step), abs(first_step + steps)) > _MOST_STEPS:
         raise ValueError(
             f"expected paths below 2**62 and steps within {_MOST_STEPS} of step 0, got paths up to "

@@ -1,0 +1,114 @@
+"""What a law of shocks is: shocks from uniforms or from correlated normals, and its theory."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable
+from dataclasses import dataclass, fields
+from itertools import pairwise
+from typing import Any, ClassVar
+
+import numpy as np
+
+from procgen.chance.blocks import Scratch, blockwise
+from procgen.chance.normal import normal_tail_of
+from procgen.spec.declare import Parameter
+
+
+@dataclass(frozen=True)
+class Law:
+    """A law with mean 0 and variance 1, whose shocks are non-decreasing functions of one uniform.
+
+    A law declares its parameters and fields of the same names, and implements `_quantile` (value code, portable
+    unless it says otherwise), `moment` and `distribution` (theory). ValueError when a parameter is out of its domain.
+    """
+
+    name: ClassVar[str]
+    source: ClassVar[str]
+    parameters: ClassVar[tuple[Parameter, ...]] = ()
+    gaussian: ClassVar[bool] = False
+    portable: ClassVar[bool] = True
+
+    def __post_init__(self) -> None:
+        for parameter in self.parameters:
+            value = getattr(self, parameter.name)
+            number = isinstance(value, int | float) and not isinstance(value, bool)
+            if not (number and math.isfinite(value) and parameter.domain.holds(value)):
+                raise ValueError(
+                    f"{self.name}: expected {parameter.name} to be {parameter.domain.describe()}, got {value!r}"
+                )
+            object.__setattr__(self, parameter.name, float(value))
+
+    def __str__(self) -> str:
+        values = ", ".join(f"{field.name}={getattr(self, field.name):.12g}" for field in fields(self))
+        return f"{self.name}({values})" if values else self.name
+
+    # shocks
+
+    def shocks(self, u, out: np.ndarray | None = None) -> np.ndarray:
+        """Shocks of uniforms in (0, 1), elementwise; out may be u itself."""
+        return blockwise(self._from_uniforms, u, out)
+
+    def shocks_from_normals(self, z, out: np.ndarray | None = None) -> np.ndarray:
+        """Shocks with the ranks of standard normals z, elementwise; out may be z itself."""
+        return blockwise(self._from_normals, z, out)
+
+    def _from_uniforms(self, u: np.ndarray, out: np.ndarray, scratch: Scratch) -> None:
+        side, p = scratch(12, len(u)), scratch(13, len(u))
+        np.subtract(u, 0.5, out=side)
+        np.minimum(u, np.subtract(1.0, u, out=p), out=p)
+        self._quantile(p, side, out, scratch)
+
+    def _from_normals(self, z: np.ndarray, out: np.ndarray, scratch: Scratch) -> None:
+        side, p = scratch(12, len(z)), scratch(13, len(z))
+        np.copyto(side, z)
+        normal_tail_of(np.abs(z, out=p), p, scratch)
+        self._quantile(p, side, out, scratch)
+
+    def _quantile(self, p: np.ndarray, side: np.ndarray, out: np.ndarray, scratch: Scratch) -> None:
+        """The values beyond which the area p <= 1/2 lies, on the lower side where side < 0.
+
+        Vectors; work arrays 0 to 11 are free.
+        """
+        raise NotImplementedError
+
+    # theory
+
+    @property
+    def highest_moment(self) -> float:
+        """The order below which moments exist; inf when all do."""
+        return math.inf
+
+    def moment(self, k: int) -> float | None:
+        """E z^k; None where it is infinite or undefined."""
+        raise NotImplementedError
+
+    @property
+    def skewness(self) -> float | None:
+        """E z^3; None where it does not exist."""
+        return self.moment(3)
+
+    @property
+    def excess_kurtosis(self) -> float | None:
+        """E z^4 - 3; None where it is infinite."""
+        fourth = self.moment(4)
+        return None if fourth is None else fourth - 3.0
+
+    def distribution(self) -> Any:
+        """The law as a frozen SciPy distribution: pdf, cdf, sf, ppf, isf, moment."""
+        raise NotImplementedError
+
+    def expect(self, f: Callable[[float], float]) -> float:
+        """E f(z) by adaptive quadrature to about 1e-10, f finite but for an integrable singularity at 0."""
+        from scipy.integrate import quad
+
+        pdf = self.distribution().pdf
+        edges = [-math.inf, *self._landmarks(), math.inf]
+        total = 0.0
+        for low, high in pairwise(edges):
+            total += quad(lambda z: f(z) * pdf(z), low, high, epsabs=1e-12, epsrel=1e-11, limit=500)[0]
+        return total
+
+    def _landmarks(self) -> tuple[float, ...]:
+        """Points where a quadrature is better cut, in increasing order."""
+        return (-1.0, 0.0, 1.0)

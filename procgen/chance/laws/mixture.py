@@ -1,0 +1,103 @@
+"""A mixture of two normal laws, standardised to mean 0 and variance 1."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from functools import lru_cache
+from typing import Any, ClassVar
+
+import numpy as np
+
+from procgen.chance.areas import Areas
+from procgen.chance.blocks import Scratch
+from procgen.chance.elementary import exp
+from procgen.chance.inversion import Inverse
+from procgen.chance.laws.base import Law
+from procgen.spec.declare import Parameter, Real
+
+_FURTHEST = 13.0  # standard deviations: the normal area beyond is 6e-39
+_MARKS = (-12, -8, -6, -4, -2, 0, 2, 4, 6, 8, 12)
+
+
+@dataclass(frozen=True)
+class Mixture(Law):
+    """With probability 1 - weight a normal N(0, 1), else N(shift, ratio**2); then standardised."""
+
+    weight: float
+    ratio: float
+    shift: float = 0.0
+
+    name: ClassVar[str] = "mixture"
+    source: ClassVar[str] = "Pearson (1894); quantile by numerical inversion, Derflinger et al. (2010)"
+    parameters: ClassVar[tuple[Parameter, ...]] = (
+        Parameter("weight", "w", Real(above=0, below=1), "probability of the second normal"),
+        Parameter("ratio", "r", Real(at_least=0.01, at_most=100), "its standard deviation relative to the first's"),
+        Parameter(
+            "shift",
+            "m",
+            Real(at_least=-20, at_most=20),
+            "its mean less the first's, in standard deviations of the first",
+            default=0.0,
+        ),
+    )
+
+    @property
+    def components(self) -> tuple[tuple[float, float, float], tuple[float, float, float]]:
+        """(weight, mean, standard deviation) of both normals of the standardised law."""
+        w, r, m = self.weight, self.ratio, self.shift
+        sd = float(np.sqrt((1 - w) + w * (r * r) + w * (1 - w) * (m * m)))
+        return (1 - w, -w * m / sd, 1 / sd), (w, (1 - w) * m / sd, r / sd)
+
+    def _quantile(self, p: np.ndarray, side: np.ndarray, out: np.ndarray, scratch: Scratch) -> None:
+        _inverse(self).quantile(p, side, out, scratch)
+
+    def moment(self, k: int) -> float:
+        return sum(
+            w * math.comb(k, j) * mean ** (k - j) * sd**j * math.prod(range(1, j, 2))
+            for w, mean, sd in self.components
+            for j in range(0, k + 1, 2)
+        )
+
+    def distribution(self) -> Any:
+        return _distribution(self)
+
+    def _landmarks(self) -> tuple[float, ...]:
+        return tuple(sorted({0.0, *(mean + i * sd for _, mean, sd in self.components for i in _MARKS)}))
+
+
+@lru_cache(maxsize=64)
+def _inverse(law: Mixture) -> Inverse:
+    def density(z: np.ndarray) -> np.ndarray:
+        total = np.zeros_like(z)
+        for w, mean, sd in law.components:
+            far = (z - mean) / sd
+            total += exp(far * far * -0.5) * (w / sd)
+        return total
+
+    reach = max(abs(mean) + _FURTHEST * sd for _, mean, sd in law.components)
+    marks = law._landmarks()
+    if law.shift == 0.0:
+        return Inverse(Areas(density, reach, marks))
+    return Inverse(Areas(density, reach, marks), Areas(lambda z: density(-z), reach, [-mark for mark in marks]))
+
+
+@lru_cache(maxsize=64)
+def _distribution(law: Mixture) -> Any:
+    from scipy.special import ndtr
+    from scipy.stats import norm, rv_continuous
+
+    class TwoNormals(rv_continuous):
+        def _pdf(self, x):
+            return sum(w * norm.pdf(x, mean, sd) for w, mean, sd in law.components)
+
+        def _cdf(self, x):
+            return sum(w * ndtr((x - mean) / sd) for w, mean, sd in law.components)
+
+        def _sf(self, x):
+            return sum(w * ndtr((mean - x) / sd) for w, mean, sd in law.components)
+
+        def _munp(self, n):
+            return law.moment(int(n))
+
+    return TwoNormals(name="mixture")()
