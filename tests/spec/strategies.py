@@ -53,7 +53,9 @@ def valid(domain, laws):
 def reals(domain):
     low = next((b for b in (domain.above, domain.at_least) if b is not None), -100.0)
     high = next((b for b in (domain.below, domain.at_most) if b is not None), max(low, 0.0) + 100.0)
-    return st.floats(low, high, allow_subnormal=False).filter(domain.holds) | st.integers(-3, 9).filter(domain.holds)
+    extreme = st.sampled_from([1e-300, 1e300, -1e300, 1e-16, 0.0, -0.0])
+    usual = st.floats(low, high, allow_subnormal=False) | st.integers(-3, 9)
+    return (usual | usual | usual | extreme).filter(domain.holds)
 
 
 def law(name, laws):

@@ -1,5 +1,6 @@
 """Any text and any structure becomes a Spec or a SpecError, in bounded time, and never another exception."""
 
+import contextlib
 import json
 import time
 from datetime import timedelta
@@ -103,15 +104,14 @@ def test_a_large_text_takes_bounded_time(part):
     timed((part * (SIZE // len(part)))[:SIZE])
 
 
-@pytest.mark.parametrize(
-    "text", ["%YAML " + "9" * 100_000 + ".1\n---\n", HEAD.replace("7", "9" * 100_000)], ids=range(2)
-)
+@pytest.mark.parametrize("text", ["%YAML " + "9" * 10**5 + ".1\n---\n", HEAD.replace("7", "9" * 10**5)], ids=range(2))
 def test_a_large_number_takes_bounded_time(text):
     timed(text)
 
 
 def timed(text):
-    """Check that reading takes a few seconds at most: the largest texts take 2 to 3 on the machine this was written on."""
+    """Check that reading takes seconds, not minutes: the slowest of these takes 3 on an idle core."""
     begin = time.process_time()
-    outcome(read_text, text, CATALOGUE, LAWS)
+    with contextlib.suppress(SpecError):
+        read_text(text, CATALOGUE, LAWS)
     assert time.process_time() - begin < 10.0

@@ -176,6 +176,13 @@ def test_the_digest_is_of_what_matters():
     assert len({read(text).digest() for text in other} | {digest}) == len(other) + 1
 
 
+def test_the_canonical_spec_reads_as_the_same_but_for_its_texts():
+    plain = WHOLE.replace("title: Cold store, quarter-hourly load\n", "").replace("    note: the meter of hall 2\n", "")
+    canonical = json.loads(json.dumps(read(WHOLE).canonical()))
+    assert read_raw(canonical, CATALOGUE, LAWS) == read(plain)
+    assert "reuse" not in canonical
+
+
 def test_the_order_of_columns_is_part_of_a_spec():
     first = HEAD + "series: {a: {constant: 1}, b: {constant: 2}}\n"
     second = HEAD + "series: {b: {constant: 2}, a: {constant: 1}}\n"
