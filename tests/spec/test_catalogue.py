@@ -58,13 +58,13 @@ def test_every_kind_refuses_a_key_it_does_not_know(kind):
     assert any(fault.message.startswith("unknown key nonsense; expected ") for fault in error.value.faults)
 
 
-@settings(deadline=2000, max_examples=150, suppress_health_check=list(HealthCheck), derandomize=True)
+@settings(deadline=10_000, max_examples=60, suppress_health_check=list(HealthCheck), derandomize=True)
 @given(specs(entries(CATALOGUE, LAWS) | st.lists(entries(CATALOGUE, LAWS), min_size=1, max_size=3)))
 def test_near_specs(raw):
     check(raw)
 
 
-@settings(deadline=2000, max_examples=50, suppress_health_check=list(HealthCheck), derandomize=True)
+@settings(deadline=10_000, max_examples=50, suppress_health_check=list(HealthCheck), derandomize=True)
 @given(specs(wild(CATALOGUE, LAWS)))
 def test_any_body(raw):
     check(raw)
