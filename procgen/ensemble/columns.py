@@ -58,7 +58,7 @@ def store(values: np.ndarray, column: Column) -> np.ndarray:
 
 
 def _rounded(values: np.ndarray, decimals: int) -> np.ndarray:
-    scale = 10.0 ** abs(decimals)  # a constant of the spec: exact up to 10^22
+    scale = float(10 ** abs(decimals))  # exact up to 10^22, and never from a library's pow
     with np.errstate(over="ignore"):
         scaled = values * scale if decimals >= 0 else values / scale
     whole = np.abs(scaled) >= EXACT if decimals >= 0 else None

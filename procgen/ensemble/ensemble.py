@@ -53,8 +53,13 @@ class Ensemble:
         """The digest of the stored values (64 hex digits)."""
         raise NotImplementedError
 
-    def stored(self, first_path: int | None = None, end_path: int | None = None) -> Blocks:
-        """Blocks in row order with values as stored, of the paths first_path … end_path − 1."""
+    def stored(
+        self, first_path: int | None = None, end_path: int | None = None, names: Sequence[str] | None = None
+    ) -> Blocks:
+        """Blocks in row order with values as stored, of the paths first_path … end_path − 1.
+
+        Blocks at the ends of the range may reach beyond it. `names` are the columns wanted, all when None.
+        """
         raise NotImplementedError
 
     def blocks(self) -> Iterator[tuple[int, int, dict[str, np.ndarray]]]:
@@ -99,7 +104,7 @@ class Ensemble:
     def _gather(self, names: Sequence[str], first: int, end: int, stored: bool = False) -> dict[str, np.ndarray]:
         types = {c.name: np.dtype(c.type if stored else np.float64) for c in self.columns if c.name in names}
         out = {name: np.empty((end - first, self.whole.steps), kind) for name, kind in types.items()}
-        for block, values in self.stored(first, end):
+        for block, values in self.stored(first, end, names):
             a, b = max(block.first_path, first), min(block.end_path, end)
             steps = slice(block.first_step - self.whole.first_step, block.end_step - self.whole.first_step)
             for name in out:
@@ -152,7 +157,9 @@ class Memory(Ensemble):
                 roots[column.name] = digest.root([(self.whole, leaves.nodes(self.whole))], self.whole)
         return digest.total(roots)
 
-    def stored(self, first_path: int | None = None, end_path: int | None = None) -> Blocks:
+    def stored(
+        self, first_path: int | None = None, end_path: int | None = None, names: Sequence[str] | None = None
+    ) -> Blocks:
         first = self.whole.first_path if first_path is None else first_path
         end = self.whole.end_path if end_path is None else end_path
         wanted = Block(first, end - first, self.whole.first_step, self.whole.steps)
@@ -174,19 +181,27 @@ class OnDisk(Ensemble):
     @property
     def spec(self) -> Any:
         if self._spec is None:
-            self._spec = read_spec(self.manifest.raw)
+            spec = read_spec(self.manifest.raw)
+            if spec.digest() != self.manifest.identity.get("spec"):
+                raise EnsembleError(
+                    f"the spec in {self.path / MANIFEST} is not the one that was drawn; draw the ensemble again"
+                )
+            self._spec = spec
         return self._spec
 
     @property
     def digest(self) -> str:
         return self.manifest.digest
 
-    def stored(self, first_path: int | None = None, end_path: int | None = None) -> Blocks:
+    def stored(
+        self, first_path: int | None = None, end_path: int | None = None, names: Sequence[str] | None = None
+    ) -> Blocks:
         first = self.whole.first_path if first_path is None else first_path
         end = self.whole.end_path if end_path is None else end_path
+        columns = [column for column in self.columns if names is None or column.name in names]
         for part in self.manifest.parts:
             if part.block.end_path > first and part.block.first_path < end:
-                yield from parquet.read(self.path / part.file, part.block, self.columns, self._stamps, first, end)
+                yield from parquet.read(self.path / part.file, part.block, columns, self._stamps, first, end)
 
 
 def open_ensemble(path: str | Path) -> OnDisk:

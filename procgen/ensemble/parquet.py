@@ -168,7 +168,8 @@ def read(
 
     try:
         with pq.ParquetFile(path) as file:
-            _expect_schema(path, file.schema_arrow, columns)
+            _expect_schema(path, file.schema_arrow, columns, stamps is not None)
+            names = [*(["time"] if stamps is not None else []), "path", "step", *(c.name for c in columns)]
             row = 0
             for group in range(file.num_row_groups):
                 rows = file.metadata.row_group(group).num_rows
@@ -178,20 +179,21 @@ def read(
                     break
                 a, b = part.first_path + here.start // part.steps, part.first_path + (row - 1) // part.steps
                 if rows and b >= first_path and (end_path is None or a < end_path):
-                    yield from _blocks(path, file.read_row_group(group, use_threads=False), here, part, columns, stamps)
+                    table = file.read_row_group(group, columns=names, use_threads=False)
+                    yield from _blocks(path, table, here, part, columns, stamps)
     except (OSError, pa.ArrowException) as error:
         raise EnsembleError(f"{path} is damaged: {_first_line(error)}; draw it again with --overwrite") from None
     if row != part.rows:
         raise EnsembleError(f"{path} is damaged: expected {part.rows} rows ({part}), it has another number")
 
 
-def _expect_schema(path: Path, found: pa.Schema, columns: Sequence[Column]) -> None:
-    wanted = {"path": "int64", "step": "int64"} | {c.name: str(_type(c.type)) for c in columns}
-    types = {name: str(kind) for name, kind in zip(found.names, found.types, strict=True)}
-    for name, kind in wanted.items():
-        if types.get(name) != kind:
+def _expect_schema(path: Path, found: pa.Schema, columns: Sequence[Column], stamped: bool) -> None:
+    for field in schema(columns, stamped):
+        types = [str(kind) for name, kind in zip(found.names, found.types, strict=True) if name == field.name]
+        if types != [str(field.type)]:
             raise EnsembleError(
-                f"{path} is damaged: expected a column {name} of type {kind}, got {types.get(name, 'none')}"
+                f"{path} is damaged: expected one column {field.name} of type {field.type}, "
+                f"got {' and '.join(types) or 'none'}"
             )
 
 

@@ -10,7 +10,6 @@ import contextlib
 import json
 import os
 import re
-import shutil
 import time
 from collections.abc import Iterator, Mapping
 from pathlib import Path
@@ -109,12 +108,12 @@ class Folder:
     def clean_state(self, keep_plan: bool) -> None:
         """Remove what earlier renders left in .state: all but the lock and, when asked, plan and states."""
         for entry in self.state.iterdir():
-            if entry.name == "lock" or (keep_plan and entry.suffix in (".json", ".npz")):
-                continue
-            try:
-                shutil.rmtree(entry) if entry.is_dir() and not entry.is_symlink() else entry.unlink()
-            except OSError as error:
-                raise EnsembleError(system_sentence(error, f"removing {entry}")) from None
+            ours = entry.suffix == ".tmp" or (entry.suffix in (".json", ".npz") and not keep_plan)
+            if ours:
+                try:
+                    entry.unlink(missing_ok=True)
+                except OSError as error:
+                    raise EnsembleError(system_sentence(error, f"removing {entry}")) from None
 
     @contextlib.contextmanager
     def locked(self) -> Iterator[int | None]:
@@ -123,6 +122,8 @@ class Folder:
         The operating system drops the lock when the last of them ends, however it ends. Without `fcntl`
         (Windows) nothing is locked.
         """
+        if self.state.is_symlink():
+            raise EnsembleError(f"{self.state} is a link to another place; remove it, or choose another OUT")
         try:
             descriptor = self._lock()
         except (NotADirectoryError, FileExistsError) as error:
