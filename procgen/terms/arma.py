@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+from typing import ClassVar
+
 import numpy as np
 
 from procgen.chance.kernel import kernel
 from procgen.spec.declare import Parameter, Reals, Record
-from procgen.terms.base import LAW, SD, TOTAL_SD, Ahead, Term, Unknown, number, one_spread, rows, signed, without_gap
+from procgen.terms.base import LAW, SD, TOTAL_SD, Ahead, Term, Unknown, number, rows, signed, without_gap
 from procgen.terms.start import JointStart, Member, companion, decay_length, partial_autocorrelations
 
 FORGOTTEN = 1e-9
@@ -48,7 +50,7 @@ class Arma(Term):
     example = "arma: {phi: [0.7, -0.1], theta: 0.3, sd: 2}"
     knows = "mean, autocovariance at any lag; marginal law when Gaussian"
     takes_shock = True
-    parameters = (
+    parameters: ClassVar[tuple[Parameter, ...]] = (
         Parameter("phi", "φ", Reals(), "coefficients of x[t−1], x[t−2], …"),
         Parameter("theta", "θ", Reals(), "coefficients of a[t−1], a[t−2], …"),
         SD,
@@ -68,7 +70,6 @@ class Arma(Term):
 
     @classmethod
     def check(cls, values):
-        yield from one_spread(values)
         phi, theta, before = values.get("phi", ()), values.get("theta", ()), values["before"]
         if before is not None:
             if len(before["x"]) < len(phi):

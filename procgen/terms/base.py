@@ -96,6 +96,10 @@ class Term:
     portable: ClassVar[bool] = True
     why_not_portable: ClassVar[str] = ""
 
+    address: str = ""  # series.label, set when the term takes its place in a graph
+    arity: int = 0  # how many inputs it has there
+    shock_scale: float = 1.0  # standard deviation of the shock that drives it
+
     def __init__(self, values: Mapping[str, Any]):
         self.values = values
 
@@ -162,17 +166,6 @@ TOTAL_SD = Parameter(
     unit="series",
 )
 LAW = Parameter("law", "", LawOf(), "law of the shock, standardised to mean 0 and variance 1", default=Normal())
-
-
-def one_spread(values: Mapping[str, Any]) -> Iterable[Issue]:
-    """The rule that a driven term states its spread once: `sd`, `total_sd` or a `shock`."""
-    if values.get("shocked"):
-        return
-    given = [name for name in ("sd", "total_sd") if values.get(name) is not None]
-    if not given:
-        yield "sd", "expected `sd` (of the shock) or `total_sd` (of the term), got neither; give exactly one"
-    if len(given) == 2:
-        yield "total_sd", "expected `sd` or `total_sd`, got both; keep one of them"
 
 
 @dataclass(eq=False)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from typing import ClassVar
 
 import numpy as np
 
@@ -91,7 +92,7 @@ class Garch(Term):
     knows = "variance, kurtosis and autocorrelation of squares where they exist; uncorrelated, not independent"
     noise = True
     outputs = ("variance",)
-    parameters = (OMEGA, SD, ALPHA, BETA, LAW, INFINITE, BEFORE)
+    parameters: ClassVar[tuple[Parameter, ...]] = (OMEGA, SD, ALPHA, BETA, LAW, INFINITE, BEFORE)
 
     @classmethod
     def check(cls, values):

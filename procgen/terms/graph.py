@@ -108,7 +108,7 @@ class Graph:
 
     def terms(self) -> Iterator[tuple[str, Node]]:
         """Every labelled term of every series and shared body, as (`series.label`, node), in spec order."""
-        owners = {**self.spec.shared, **self.spec.series}
+        owners: dict[str, Any] = {**self.spec.shared, **self.spec.series}
         for owner, body in owners.items():
             for entry in _walk(body.of):
                 node = self._entry(entry, owner)
@@ -195,7 +195,7 @@ class Graph:
 
     def _entry_named(self, owner: str, label: str, name: str) -> Entry:
         body = self.spec.series.get(owner) or self.spec.shared[owner]
-        labels = {}
+        labels: dict[str, Entry] = {}
         for entry in _walk(body.of):
             labels.setdefault(entry.label or entry.kind, entry)
         if label not in labels:

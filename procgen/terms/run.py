@@ -6,6 +6,7 @@ A `Run` is a pure function of the graph and the range: how its steps are cut int
 from __future__ import annotations
 
 from collections.abc import Sequence
+from functools import partial
 from typing import Any
 
 import numpy as np
@@ -35,7 +36,7 @@ class Run:
         self.columns: dict[str, Node] = {**graph.series, **{name: graph.resolve(name) for name in reveal}}
         self._order = graph.order(list(self.columns.values()))
         self._states: dict[str, State] = {}
-        self._begun: dict[int, Any] = {}
+        self._begun: dict[Any, Any] = {}
         self._joint: dict[int, list[tuple[Array, Array]]] = {}
 
     def tile(self, steps: int) -> dict[str, Array]:
@@ -125,8 +126,8 @@ class Run:
         before = Before(
             head=node.head,
             inputs=tuple(self._rows(part) for part in node.inputs),
-            peek=lambda i, node=node: self._peek(node.inputs[i]),
-            normals=lambda count, node=node: self._start_normals(self._source_below(node), 0, count),
+            peek=lambda i: self._peek(node.inputs[i]),
+            normals=lambda count: self._start_normals(self._source_below(node), 0, count),
             joint=self._joint_rows(node) if node.joint else None,
         )
         values, state = node.term.begin(before)
@@ -149,8 +150,8 @@ class Run:
         if id(joint) not in self._joint:
             heads = [n.head for n in self._order if isinstance(n, Node) and n.joint and n.joint[0] is joint]
             self._joint[id(joint)] = joint.draw(
-                [lambda first, count, s=s: self._past_normals(s, first, count) for s in sources],
-                [lambda first, count, s=s: self._start_normals(s, first, count) for s in sources],
+                [partial(self._past_normals, source) for source in sources],
+                [partial(self._start_normals, source) for source in sources],
                 max(heads),
             )
         return self._joint[id(joint)][place]

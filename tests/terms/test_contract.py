@@ -33,7 +33,7 @@ RICH = {
     "twice": "{difference: {of: [{random_walk: {sd: 1}}], by: 2, order: 2}}",
     "prices": "{exp: [{random_walk: {sd: 0.01, drift: 0.001, start: 3}}]}",
     "scaled": "{exp: [{ar: {phi: 0.5, sd: 0.1}, times: 2}, {constant: 1}], times: 3}",
-    "envelope": "{product: [{seasonal: {period: 7, profile: [1, 2, 3, 4, 3, 2, 1], centre: mean}}, {ar: {phi: 0.5, sd: 1}}]}",
+    "envelope": "{product: [{seasonal: {period: 3, profile: [1, 2, 4], centre: mean}}, {ar: {phi: 0.5, sd: 1}}]}",
 }
 EXAMPLES = {kind: "{" + term.example + "}" for kind, term in catalogue().items() if kind != "use"}
 CASES = {**EXAMPLES, **RICH}

@@ -112,7 +112,10 @@ def test_adding_renaming_nesting_and_reordering_move_no_draw():
 
 
 def test_an_appended_correlation_moves_nobody():
-    text = "  x: {ar: {phi: 0.5, sd: 1}}\n  y: {arma: {phi: 0.3, theta: [0.2, 0.4, 0.1], sd: 1}}\n  z: {ma: {theta: 0.5, sd: 1}}"
+    text = (
+        "  x: {ar: {phi: 0.5, sd: 1}}\n  y: {arma: {phi: 0.3, theta: [0.2, 0.4, 0.1], sd: 1}}\n"
+        "  z: {ma: {theta: 0.5, sd: 1}}"
+    )
     pair = "correlation:\n  - {between: [x.ar, y.arma], value: 0.5}"
     more = pair + "\n  - {between: [x.ar, z.ma], value: -0.4}"
     alone, two, three = (draw(graph_of(text, rest=rest), 0, 8, [40]) for rest in ("", pair, more))
