@@ -25,7 +25,7 @@ expect() {
 
 say "1. What the spec says: procgen theory demo/island.yaml"
 $procgen theory demo/island.yaml > "$out/theory.txt"
-sed -n '1,18p' "$out/theory.txt"
+sed -n '/^power_kw\[t\]/,/^$/p; /^power_kw (kW)/,/^$/p' "$out/theory.txt"
 echo "... (all of it: $out/theory.txt)"
 
 say "2. 2,000 paths of 2,000 hours: procgen render demo/island.yaml -o $out/island"
@@ -34,7 +34,7 @@ $procgen render demo/island.yaml -o "$out/island"
 say "3. Do the paths follow the spec? procgen validate $out/island"
 expect 0 $procgen validate "$out/island" > "$out/verdict.txt"
 sed -n '1,4p' "$out/verdict.txt"
-echo "... (every check: $out/verdict.txt)"
+echo "... (all of it: $out/verdict.txt)"
 
 say "4. A spec with faults: procgen theory demo/fault.yaml"
 expect 2 $procgen theory demo/fault.yaml
@@ -44,13 +44,13 @@ cp -R "$out/island" "$out/tampered"
 .venv/bin/python demo/tamper.py "$out/tampered" water_m3
 expect 1 $procgen validate "$out/tampered" > "$out/refused.txt"
 sed -n '1,16p' "$out/refused.txt"
-echo "... (every check: $out/refused.txt)"
+echo "... (all of it: $out/refused.txt)"
 
 say "Done in $(($(date +%s) - began)) s"
 cat <<END
 Theory, paths and verdict agree for demo/island.yaml; the faulty spec and the tampered copy were refused.
   $out/theory.txt     what the spec implies: equations, means, variances, correlations
   $out/island/        the paths (Parquet, long layout) and manifest.json
-  $out/verdict.txt    the checks that the paths passed
-  $out/refused.txt    the checks that the tampered copy failed
+  $out/verdict.txt    the verdict on the paths
+  $out/refused.txt    the verdict on the tampered copy
 END

@@ -69,7 +69,7 @@ def render(
         raise typer.BadParameter(f"expected local, got {scheduler!r}", param_hint="--scheduler")
     loaded = pg.load(spec)
     with progress("drawing") as tick:
-        ensemble = pg.render(
+        pg.render(
             loaded,
             out,
             paths=paths,
@@ -83,7 +83,7 @@ def render(
             overwrite=overwrite,
             progress=tick,
         )
-    printed(rendered(ensemble))
+    printed(rendered(pg.open_ensemble(out)))
 
 
 @app.command(

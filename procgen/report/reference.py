@@ -17,7 +17,7 @@ from procgen.chance.laws import LAWS
 from procgen.report.catalogue import SHOCK, equation, example_spec, noises, rows
 from procgen.spec.declare import Parameter
 from procgen.spec.entries import walk
-from procgen.spec.model import Spec
+from procgen.spec.model import Series, Shared, Spec
 from procgen.spec.reader import HEAD, SERIES, read_file
 from procgen.spec.timegrid import TIME
 from procgen.terms import catalogue
@@ -80,7 +80,7 @@ def gallery(folder: Path) -> str:
 
 def kinds(spec: Spec) -> set[str]:
     """The kinds of term that a spec uses."""
-    bodies = [*spec.shared.values(), *spec.series.values()]
+    bodies: list[Shared | Series] = [*spec.shared.values(), *spec.series.values()]
     return {entry.kind for body in bodies for entry, _ in walk(body.of)}
 
 
