@@ -19,7 +19,7 @@ import numpy as np
 
 from procgen.theory.unknown import Unknown
 
-WORST = 1e6  # condition number from which a small system is solved in rational numbers
+WEAK, HOPELESS = 1e6, 1e12  # condition numbers: beyond the first rational numbers are used while that is quick
 LARGEST_RATIONAL = 24
 LONGEST_RECURSION = 1 << 21  # beyond this lag single values come from powers of the companion matrix
 
@@ -125,9 +125,9 @@ def _split(a: np.ndarray, b: np.ndarray) -> tuple[np.ndarray, np.ndarray, float]
     solution = solution + lu_solve(factors, residual.astype(float))
     inverse = lapack.dgecon(factors[0], np.abs(system).sum(axis=0).max())[0]
     condition = 1.0 / inverse if inverse > 0.0 else np.inf
-    if condition > WORST:
-        if size > LARGEST_RATIONAL:
-            raise Unknown(f"its coefficients are too near to a unit root (condition number {condition:.1g})")
+    if condition > HOPELESS and size > LARGEST_RATIONAL:
+        raise Unknown(f"its coefficients are too near to a unit root (condition number {condition:.1g})")
+    if condition > WEAK and size <= LARGEST_RATIONAL:
         solution = _rational_solution(system, one)
     return solution[: ahead + 1], np.concatenate([[0.0], solution[ahead + 1 :]]), condition
 

@@ -75,7 +75,8 @@ class Axis:
             tuple(before_variance) if before_variance is not None else None, squares,
         )  # fmt: skip
         path = process.variance_path if process.started else None
-        source = self.space.add(Source(key, GARCH, process.variance, law, path, detail=process))
+        settles = process.settles if process.started else 0.0
+        source = self.space.add(Source(key, GARCH, process.variance, law, path, settles, detail=process))
         noise = self._noise(source, started=process.started)
         return Expression(
             self.space, self._past(before_shocks), noise.linear, outputs={"variance": lambda: self._variance(source)}

@@ -22,9 +22,10 @@ from typing import Any
 
 import numpy as np
 
-from procgen.theory.arma import cross_covariance, polynomial
+from procgen.theory.arma import companion, cross_covariance, polynomial
 
 ROOT_TOLERANCE = 1e-10
+SETTLED = 1e-16
 
 
 @dataclass(frozen=True)
@@ -146,6 +147,17 @@ class Garch:
         if excess(low) >= 0.0:
             return 0.0
         return 2.0 * brentq(excess, low, high, xtol=ROOT_TOLERANCE)
+
+    @property
+    def settles(self) -> float:
+        """Steps after which the variance path is at its limit to 1e-16; inf where it has none."""
+        if self.total >= 1.0:
+            return np.inf
+        power, steps = companion(self.persistence), 1
+        with np.errstate(under="ignore"):
+            while np.abs(power).max() > SETTLED:
+                power, steps = power @ power, 2 * steps
+        return float(steps)
 
     def variance_path(self, steps: np.ndarray) -> np.ndarray:
         """E h(t) at steps >= 0 from the given past: m(t) = omega + sum alpha_i E e(t-i)^2 + sum beta_j m(t-j)."""

@@ -13,7 +13,7 @@ from typing import Any
 
 import numpy as np
 
-from procgen.theory.copula import law_correlation
+from procgen.theory.copula import is_symmetric, law_correlation
 from procgen.theory.unknown import Unknown
 
 IID, GARCH, SQUARES, OPAQUE = "independent", "garch", "squares", "opaque"
@@ -24,7 +24,8 @@ class Source:
     """White noise at an address; one object each.
 
     `variance` is inf where there is none. `path` gives the variance at steps >= 0 for a source that leaves from a
-    given past. An opaque source stands for what has no closed form: `depends` are the sources behind it.
+    given past, until step `settles` (inf: for ever). An opaque source stands for what has no closed form:
+    `depends` are the sources behind it.
     """
 
     key: str
@@ -32,6 +33,7 @@ class Source:
     variance: float
     law: Any = None
     path: Callable[[np.ndarray], np.ndarray] | None = None
+    settles: float = 0.0
     owner: Source | None = None  # the garch whose squares a SQUARES source drives
     detail: Any = None  # the Garch behind a garch or squares source; the ingredients of an opaque one
     depends: frozenset[Source] = frozenset()
@@ -45,7 +47,7 @@ class Source:
     @property
     def symmetric(self) -> bool:
         """Whether flipping all signs leaves its law as it is."""
-        return self.kind in (IID, GARCH) and self.law.skewness == 0.0
+        return self.kind in (IID, GARCH) and is_symmetric(self.law)
 
 
 @dataclass

@@ -23,7 +23,7 @@ LARGEST_STATE = 1500
 MANY = 128  # from so many distinct gaps on, a table of responses is cheaper than powers
 OVERHEAD = 20_000  # of a few small array operations, in multiplications
 LONGEST_RESPONSE = 50_000_000  # numbers in a table of responses
-SETTLED = 1e-15  # relative distance from its limit at which a variance path counts as constant
+LONGEST_MARCH = 500_000  # steps taken one by one while the variance of a source changes
 
 Distinct = tuple[np.ndarray, np.ndarray]
 
@@ -32,7 +32,7 @@ Distinct = tuple[np.ndarray, np.ndarray]
 class System:
     """A linear state space; `sources` name the columns of B and the rows of `noise` (their covariance).
 
-    `noise_path` gives the source variances at given steps, (steps, sources), where they still change.
+    `noise_path` gives the source variances at given steps, (steps, sources), where they change until step `settles`.
     """
 
     transition: np.ndarray
@@ -42,6 +42,7 @@ class System:
     noise: np.ndarray
     sources: tuple[str, ...]
     noise_path: Callable[[np.ndarray], np.ndarray] | None = None
+    settles: float = 0.0
     _table: list[tuple[np.ndarray, np.ndarray]] = field(default_factory=list, repr=False)
 
     def covariance(self, i: int, j: int, t: np.ndarray, s: np.ndarray) -> np.ndarray:
@@ -74,17 +75,15 @@ class System:
         return np.einsum("pi,pi->p", rows[gap_at[1]], seen[at[1]])
 
     def _advance(self, p: np.ndarray, now: int, step: int) -> np.ndarray:
-        while self.noise_path is not None and now < step:
-            now += 1
-            variances = self.noise_path(np.array([now]))[0]
-            if np.abs(variances - np.diag(self.noise)).max() <= SETTLED * np.diag(self.noise).max():
-                now -= 1
-                break
-            if now > LONGEST_RESPONSE // 100:
-                raise Unknown("the variance of a source has not settled after half a million steps")
-            q = self.noise.copy()
-            np.fill_diagonal(q, variances)
-            p = self.transition @ p @ self.transition.T + self.loading @ q @ self.loading.T
+        while now < min(step, self.settles):
+            if now >= LONGEST_MARCH:
+                raise Unknown(f"the variance of a source has not settled after {LONGEST_MARCH} steps")
+            block = np.arange(now + 1, min(step, self.settles, now + 4096) + 1)
+            for variances in self.noise_path(block):
+                q = self.noise.copy()
+                np.fill_diagonal(q, variances)
+                p = self.transition @ p @ self.transition.T + self.loading @ q @ self.loading.T
+            now = int(block[-1])
         gap, k = step - now, 0
         while gap:
             if gap & 1:
@@ -179,7 +178,16 @@ def system_of(space: Space, forms: Sequence[Linear]) -> System:
         for key, c in form.items():
             row[layout.index(key)] += c
     initial = _initial(space, layout, sources)
-    return System(transition, loading, observation, initial, noise, tuple(s.key for s in sources), _noise_path(sources))
+    return System(
+        transition,
+        loading,
+        observation,
+        initial,
+        noise,
+        tuple(s.key for s in sources),
+        _noise_path(sources),
+        max((s.settles for s in sources), default=0.0),
+    )
 
 
 class _Layout:

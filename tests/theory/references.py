@@ -29,11 +29,6 @@ class ReferenceLaw:
         scale = 1.0 / law.std()
         return getattr(stats, self.base)(*self.args, loc=-law.mean() * scale, scale=scale)
 
-    def shocks_from_normals(self, z):
-        law = self.distribution()
-        tail = stats.norm.sf(np.abs(z))
-        return np.where(z < 0, law.ppf(tail), law.isf(tail))
-
     def expect(self, f):
         law = self.distribution()
         halves = (quad(lambda z: f(z) * law.pdf(z), *ends, limit=400)[0] for ends in ((-np.inf, 0), (0, np.inf)))
