@@ -11,7 +11,7 @@ import numpy as np
 
 from procgen.chance.streams import STREAM_VERSION
 from procgen.ensemble import digest, parquet
-from procgen.ensemble.columns import as_float, store
+from procgen.ensemble.columns import store
 from procgen.ensemble.draw import Drawer, empty
 from procgen.ensemble.ensemble import Blocks
 from procgen.ensemble.errors import EnsembleError
@@ -177,7 +177,7 @@ class Reader:
         leaves = {column.name: digest.Leaves(part.block) for column in self.columns}
         for block, values in self._read(part):
             for name, each in leaves.items():
-                each.add(block.first_path, block.first_step, as_float(values[name]))
+                each.add(block.first_path, block.first_step, values[name])
         return {name: each.nodes(self.manifest.whole) for name, each in leaves.items()}
 
     def _read(self, part: PartRecord, first: int = 0, end: int | None = None) -> Blocks:

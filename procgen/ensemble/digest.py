@@ -30,7 +30,7 @@ class Leaves:
         self._open: dict[Key, hashlib._Hash] = {}
 
     def add(self, first_path: int, first_step: int, values: np.ndarray) -> None:
-        """Take (paths, steps) values: whole paths of the part, or a run of one path's steps."""
+        """Take (paths, steps) values of a type that float64 holds: whole paths, or a run of one path."""
         paths, steps = values.shape
         for first in range(first_path - first_path % LANES, first_path + paths, LANES):
             rows = slice(max(first - first_path, 0), first - first_path + LANES)

@@ -153,7 +153,7 @@ class Memory(Ensemble):
         for column in self.columns:
             if not column.revealed:
                 leaves = digest.Leaves(self.whole)
-                leaves.add(self.whole.first_path, self.whole.first_step, as_float(self._values[column.name]))
+                leaves.add(self.whole.first_path, self.whole.first_step, self._values[column.name])
                 roots[column.name] = digest.root([(self.whole, leaves.nodes(self.whole))], self.whole)
         return digest.total(roots)
 

@@ -14,7 +14,7 @@ from typing import Any
 import numpy as np
 
 from procgen.ensemble import digest
-from procgen.ensemble.columns import Column, as_float, store
+from procgen.ensemble.columns import Column, store
 from procgen.ensemble.draw import Drawer, Tick, empty
 from procgen.ensemble.parquet import PartWriter
 from procgen.ensemble.plan import Block, Chain, batches
@@ -117,7 +117,7 @@ class Digests:
 
     def add(self, batch: Block, drawn: Mapping[str, np.ndarray], stored: Mapping[str, np.ndarray]) -> None:
         for name, leaves in self.stored.items():
-            leaves.add(batch.first_path, batch.first_step, as_float(stored[name]))
+            leaves.add(batch.first_path, batch.first_step, stored[name])
         for name, leaves in self.drawn.items():
             leaves.add(batch.first_path, batch.first_step, drawn[name])
 

@@ -75,7 +75,7 @@ def test_one_bit_one_name_or_one_place_changes_the_digest():
     values = RNG.random((20, 5))
     assert by_hand(values, 0) != by_hand(values, 16)
     other = values.copy()
-    other.view(np.uint64)[19, 4] ^= 1
+    other.view(np.uint64)[19, 4] ^= np.uint64(1)
     assert by_hand(values, 0) != by_hand(other, 0)
     roots = {"a": by_hand(values, 0), "b": by_hand(other, 0)}
     assert digest.total(roots) == digest.total(dict(reversed(roots.items())))
