@@ -9,8 +9,6 @@ from procgen.chance.laws import LAWS
 from procgen.spec import declare
 from procgen.terms import catalogue
 
-LABELS = iter(())
-
 
 def numbers(domain) -> st.SearchStrategy[float]:
     """Numbers of moderate size within the bounds of a Real."""
@@ -86,14 +84,73 @@ def entries(draw, depth: int = 2) -> dict:
     for parameter in term.parameters:
         if isinstance(parameter.domain, declare.Body):
             values[parameter.name] = draw(st.lists(entries(depth - 1), min_size=1, max_size=2))
-    if term.takes_shock:
-        for name in ("sd", "total_sd"):
-            values.pop(name, None)
-        values["sd"] = draw(st.floats(0.1, 2).map(lambda x: round(x, 2)))
-    entry = {kind: values, "as": f"n{draw(st.integers(0, 10**6))}"}
+    mended = MEND.get(kind, lambda values, x: values)(values, draw(st.floats(0.1, 0.9).map(lambda x: round(x, 2))))
+    entry = {kind: mended, "as": "?"}
     if draw(st.booleans()):
         entry["times"] = draw(st.sampled_from([0.5, -1.0, 2.0]))
     return entry
+
+
+def driven(values: dict, x: float) -> dict:
+    """One spread, and a past that is long enough or none."""
+    values.pop("total_sd", None)
+    before = values.get("before")
+    if before is not None:
+        needs = max(len(values.get("phi", [])), 1), len(values.get("theta", []))
+        before["x"] = [*before.get("x", []), *[0.5] * needs[0]]
+        before["shocks"] = [*before.get("shocks", []), *[0.2] * needs[1]]
+    return values | {"sd": x}
+
+
+def walking(values: dict, x: float) -> dict:
+    return {name: value for name, value in values.items() if name != "total_sd"} | {"sd": x}
+
+
+def clustering(values: dict, x: float) -> dict:
+    """A variance: alpha and beta scaled to a persistence below 1, and one spread."""
+    total = sum(values["alpha"]) + sum(values.get("beta", []))
+    scale = x / total if total else 1.0
+    kept = {name: [round(v * scale, 4) for v in values[name]] for name in ("alpha", "beta") if name in values}
+    if "before" in values:
+        values["before"] = {"variance": [0.5] * 4, "shocks": [0.1] * 4}
+    return {name: value for name, value in values.items() if name != "omega"} | kept | {"sd": x}
+
+
+def repeating(values: dict, x: float) -> dict:
+    """Harmonics or a profile, not both."""
+    if values.get("harmonics"):
+        values.pop("profile", None)
+    else:
+        values = {**values, "profile": [1.0, 2.0, x]}
+        values.pop("harmonics", None)
+    return values
+
+
+def bending(values: dict, x: float) -> dict:
+    """Bends in order."""
+    bends = sorted({b["at"]: b for b in values.pop("bends", [])}.values(), key=lambda b: b["at"])
+    return values | ({"bends": bends} if bends else {})
+
+
+MEND = {
+    **dict.fromkeys(("ar", "ma", "arma"), driven),
+    "random_walk": walking,
+    **dict.fromkeys(("garch", "arch"), clustering),
+    "seasonal": repeating,
+    "trend": bending,
+}
+
+
+def labelled(entries: list, count: list[int]) -> list:
+    """The same entries, each with a label of its own."""
+    for entry in entries:
+        if "as" in entry:
+            count[0] += 1
+            entry["as"] = f"n{count[0]}"
+        for values in entry.values():
+            if isinstance(values, dict) and isinstance(values.get("of"), list):
+                labelled(values["of"], count)
+    return entries
 
 
 @st.composite
@@ -106,7 +163,7 @@ def specs(draw) -> dict:
         readable = ["w", *series]
         if draw(st.booleans()):
             body.append({"use": draw(st.sampled_from(readable))})
-        series[name] = body
+        series[name] = labelled(body, [0])
     steps = draw(st.integers(1, 40))
-    shared = {"w": [draw(entries(0))]}
+    shared = {"w": labelled([draw(entries(0))], [0])}
     return {"procgen": 1, "seed": 5, "paths": 20, "time": {"steps": steps}, "shared": shared, "series": series}
