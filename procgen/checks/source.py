@@ -8,6 +8,7 @@ from typing import Any, Protocol
 
 import numpy as np
 
+from procgen.checks.foreign import TableError
 from procgen.checks.verdict import Check
 
 
@@ -25,12 +26,14 @@ class Origin(Protocol):
 
 
 def origin(data: Any, spec: Any, columns: Mapping[str, str] | None) -> Origin:
-    """The origin behind whatever was given to `validate`; ValueError when nothing can be read from it."""
+    """The origin behind whatever was given to `validate`; TableError when nothing can be read from it."""
     from procgen.checks.validate import read_spec
 
     spec = read_spec(spec)
     if isinstance(data, str | Path):
         path = Path(data)
+        if not path.exists():
+            raise TableError(f"there is no file or folder {path}; check the path")
         if path.is_dir():
             from procgen.ensemble import open_ensemble
 
@@ -47,12 +50,12 @@ def origin(data: Any, spec: Any, columns: Mapping[str, str] | None) -> Origin:
 
         _need_spec(spec, "the table")
         return from_frame(data, spec, columns)
-    raise ValueError(f"expected an ensemble, a DataFrame, or the path of one, got {type(data).__name__}")
+    raise TableError(f"expected an ensemble, a DataFrame, or the path of one, got {type(data).__name__}")
 
 
 def _need_spec(spec: Any, what: object) -> None:
     if spec is None:
-        raise ValueError(f"{what} does not say what it should follow; give the spec (--spec SPEC)")
+        raise TableError(f"{what} does not say what it should follow; give the spec (--spec SPEC)")
 
 
 class EnsembleOrigin:
@@ -65,7 +68,7 @@ class EnsembleOrigin:
         self.faults: list[Check] = []
         missing = [name for name in self.spec.series if name not in ensemble.names]
         if missing:
-            raise ValueError(f"the ensemble has no series {', '.join(missing)}; it has {', '.join(ensemble.names)}")
+            raise TableError(f"the ensemble has no series {', '.join(missing)}; it has {', '.join(ensemble.names)}")
         self.names = list(self.spec.series)
         self._nodes: list[tuple[Any, dict[str, Any]]] = []
 
