@@ -115,7 +115,7 @@ class Areas:
             good = np.abs(both - whole) <= _AGREEMENT * both + _NOTHING
             done.append((left[good], right[good], both[good]))
             bad = ~good
-            if bad.sum() > _MOST_PANELS:
+            if np.count_nonzero(bad) > _MOST_PANELS:
                 raise ValueError("expected a smooth density, got one that no halving of panels can integrate")
             left, right = np.concatenate([left[bad], middle[bad]]), np.concatenate([middle[bad], right[bad]])
             whole = np.concatenate([first[bad], second[bad]])

@@ -54,6 +54,7 @@ class Stream:
         self, first_path: int, paths: int, first_step: int, steps: int, out: np.ndarray | None = None
     ) -> np.ndarray:
         """Raw 64-bit words, uint64 (steps, paths), row i being step first_step + i (negative steps allowed)."""
+        _check_address(first_path, paths, first_step, steps)
         if out is None:
             out = np.empty((steps, paths), np.uint64)
         self._fill(first_path, paths, first_step, steps, out, None)
@@ -63,6 +64,7 @@ class Stream:
         self, first_path: int, paths: int, first_step: int, steps: int, out: np.ndarray | None = None
     ) -> np.ndarray:
         """Uniforms in (0, 1), float64 (steps, paths): odd multiples of 2**-53, so 1 - u is exact too."""
+        _check_address(first_path, paths, first_step, steps)
         if out is None:
             out = np.empty((steps, paths))
         self._fill(first_path, paths, first_step, steps, out.view(np.uint64), _uniform_bits)
@@ -77,7 +79,8 @@ class Stream:
         out: np.ndarray,
         convert: Callable[[np.ndarray], object] | None,
     ) -> None:
-        _check_address(first_path, paths, first_step, steps, out)
+        if out.shape != (steps, paths):
+            raise ValueError(f"expected out of shape (steps, paths) = ({steps}, {paths}), got {out.shape}")
         before = min(steps, max(0, -first_step))
         draw = _Generator(self.key, first_path, paths, convert)
         if before:
@@ -135,7 +138,7 @@ class _Generator:
         self.philox.state = self.state
 
 
-def _check_address(first_path: int, paths: int, first_step: int, steps: int, out: np.ndarray) -> None:
+def _check_address(first_path: int, paths: int, first_step: int, steps: int) -> None:
     if first_path < 0 or paths < 0 or steps < 0:
         raise ValueError(f"expected first_path, paths and steps of at least 0, got {first_path}, {paths} and {steps}")
     if first_path + paths > 2**62 or max(abs(first_step), abs(first_step + steps)) > _MOST_STEPS:
@@ -143,5 +146,3 @@ def _check_address(first_path: int, paths: int, first_step: int, steps: int, out
             f"expected paths below 2**62 and steps within {_MOST_STEPS} of step 0, got paths up to "
             f"{first_path + paths} and steps {first_step} to {first_step + steps}"
         )
-    if out.shape != (steps, paths):
-        raise ValueError(f"expected out of shape (steps, paths) = ({steps}, {paths}), got {out.shape}")

@@ -79,9 +79,11 @@ class Logistic(Law):
         np.copysign(np.multiply(x, _ROOT_3_PER_PI, out=x), side, out=out)
 
     def moment(self, k: int) -> float:
-        from scipy.special import bernoulli
+        from scipy.special import zeta
 
-        return 0.0 if k % 2 else float(3.0 ** (k // 2) * (2.0**k - 2) * abs(bernoulli(k)[k])) if k else 1.0
+        if k % 2 or k == 0:
+            return float(k == 0)
+        return 2 * math.factorial(k) * (1 - 2.0 ** (1 - k)) * float(zeta(k)) * _ROOT_3_PER_PI**k
 
     def distribution(self) -> Any:
         from scipy.stats import logistic

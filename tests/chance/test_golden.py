@@ -1,0 +1,66 @@
+"""The same bits on every processor: digests frozen in tests/golden/chance.json."""
+
+import json
+import os
+import subprocess
+import sys
+from pathlib import Path
+
+import pytest
+from numpy._core import _multiarray_umath as numpy_build
+
+from tests.chance.golden import FILE, digests
+
+GOLDEN = json.loads(FILE.read_text())["digests"]
+ROOT = Path(__file__).parent.parent.parent
+
+
+def test_digests():
+    assert digests() == GOLDEN
+
+
+def dispatched():
+    """The features above NumPy's baseline that it uses on this processor."""
+    return [name for name in numpy_build.__cpu_dispatch__ if numpy_build.__cpu_features__.get(name)]
+
+
+def digests_in_a_process(**environment):
+    done = subprocess.run(
+        [sys.executable, "-W", "error", "-m", "tests.chance.golden"],
+        cwd=ROOT,
+        env={**os.environ, **environment},
+        capture_output=True,
+        text=True,
+    )
+    assert done.returncode == 0, done.stderr
+    return json.loads(done.stdout)["digests"]
+
+
+def test_digests_without_any_dispatched_feature(tmp_path):
+    """NumPy's loops for the baseline processor, and kernels compiled for a processor without extensions."""
+    if not dispatched():
+        pytest.skip("this processor has nothing above NumPy's baseline")
+    found = digests_in_a_process(
+        NPY_DISABLE_CPU_FEATURES=" ".join(dispatched()),
+        NUMBA_CPU_NAME="generic",
+        NUMBA_CPU_FEATURES="",
+        XDG_CACHE_HOME=str(tmp_path),
+    )
+    assert found == GOLDEN
+
+
+def test_what_the_rules_forbid_does_differ():
+    """The check can fail: NumPy's own exp, log or sin differ between its loops, on processors that have both."""
+    if "X86_V4" not in dispatched() and "AVX512_SKX" not in dispatched():
+        pytest.skip("needs a processor with AVX-512 for NumPy's two loops")
+    code = (
+        "import numpy as np, hashlib; x = np.random.default_rng(1).uniform(0.1, 20, 100_000);"
+        "print(hashlib.sha256(np.exp(x).tobytes() + np.log(x).tobytes() + np.sin(x).tobytes()).hexdigest())"
+    )
+    outputs = {
+        subprocess.run(
+            [sys.executable, "-c", code], env={**os.environ, **extra}, capture_output=True, text=True, check=True
+        ).stdout
+        for extra in ({}, {"NPY_DISABLE_CPU_FEATURES": " ".join(dispatched())})
+    }
+    assert len(outputs) == 2
