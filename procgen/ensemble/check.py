@@ -78,6 +78,8 @@ class DigestResult:
     def text(self) -> str:
         """The result in a few lines."""
         lines = [str(damage) for damage in self.damages]
+        if self.damages:
+            lines.append("to mend: remove the damaged parts, then render again with --resume")
         if self.digest is not None:
             verdict = "as recorded" if self.digest == self.recorded else f"recorded was {self.recorded}"
             lines.append(f"{self.digest}  {verdict}")

@@ -15,7 +15,7 @@ from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.manifest import Manifest, bytes_text
 from procgen.ensemble.plan import Block
 from procgen.ensemble.source import read_spec
-from procgen.ensemble.store import MANIFEST, Folder
+from procgen.ensemble.store import MANIFEST, PLAN, Folder
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -212,7 +212,7 @@ def open_ensemble(path: str | Path) -> OnDisk:
     folder = Folder(Path(path))
     data = folder.read_json(MANIFEST)
     if data is None:
-        unfinished = (folder.state / "plan.json").exists()
+        unfinished = (folder.path / PLAN).exists()
         raise EnsembleError(
             f"{path} is an unfinished ensemble; go on with: procgen render SPEC -o {path} --resume"
             if unfinished

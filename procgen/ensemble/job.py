@@ -1,29 +1,28 @@
-"""From a spec to an ensemble: what is there already, what must be drawn, who draws it, and the manifest."""
+"""From a spec to an ensemble: what must be drawn, who draws it, and the manifest."""
 
 from __future__ import annotations
 
 import shutil
-from collections.abc import Mapping, Sequence
-from dataclasses import asdict, dataclass
-from itertools import groupby
+from collections.abc import Sequence
+from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
 from procgen.chance.streams import STREAM_VERSION
-from procgen.ensemble import engines, manifest, parquet
+from procgen.ensemble import engines, manifest
 from procgen.ensemble.columns import TYPES, store
 from procgen.ensemble.draw import Drawer, empty
 from procgen.ensemble.engines import Progress
-from procgen.ensemble.ensemble import Ensemble, Memory, OnDisk, refuse_missing
+from procgen.ensemble.ensemble import Ensemble, Memory, OnDisk
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.manifest import Manifest, bytes_text
 from procgen.ensemble.part import Task, row_bytes
 from procgen.ensemble.plan import Block, Chain, batches, chains
-from procgen.ensemble.source import FACTORY, Source, open_source, remember
+from procgen.ensemble.present import Present
+from procgen.ensemble.source import FACTORY, Source, open_source, remember, revealable
 from procgen.ensemble.store import MANIFEST, Folder
 
 LAYOUTS = ("long",)
-PLAN = ".state/plan.json"
 MOST = 2**48  # paths, and steps: far beyond what can be stored, and safe in every int64
 
 
@@ -99,8 +98,6 @@ def _reveal(spec: Any, reveal: Sequence[str] | str | None) -> tuple[str, ...]:
     if isinstance(reveal, str):
         reveal = [name.strip() for name in reveal.split(",")]
     if list(reveal) == ["all"]:
-        from procgen.ensemble.source import revealable
-
         return revealable(spec)
     return tuple(dict.fromkeys(reveal))
 
@@ -165,119 +162,30 @@ class Job:
             "layout": self.layout,
             "reveal": list(self.reveal),
         }
+        self.present = Present(self.folder, self.whole, self.identity)
 
     def run(self, workers: int, resume: bool, overwrite: bool, progress: Progress | None) -> OnDisk:
-        if not overwrite and (complete := self._complete(resume)) is not None:
-            return complete
+        """Draw what is missing; nothing when all is there."""
+        if not overwrite and (found := self.present.complete(resume)) is not None:
+            self.folder.tidy()
+            return OnDisk(self.folder.path, found, self.spec)
         with self.folder.locked() as descriptor:
             # another render may have finished while this one waited for the lock
-            if not overwrite and (complete := self._complete(resume)) is not None:
-                return complete
-            return self._draw(workers, resume, overwrite, progress, descriptor)
-
-    # what is there
-
-    def _complete(self, resume: bool) -> OnDisk | None:
-        """The finished ensemble in the folder, None when there is something to draw."""
-        found = self._manifest()
-        if found is None:
-            return None
-        self._refuse_other(found.identity)
-        try:
-            refuse_missing(self.folder, found)
-        except EnsembleError:
-            if not resume:
-                raise
-            return None
+            if overwrite or (found := self.present.complete(resume)) is None:
+                found = self._draw(workers, resume, overwrite, progress, descriptor)
         return OnDisk(self.folder.path, found, self.spec)
-
-    def _manifest(self) -> Manifest | None:
-        data = self.folder.read_json(MANIFEST)
-        return None if data is None else Manifest.read(data, str(self.folder.path / MANIFEST))
-
-    def _refuse_other(self, identity: Mapping[str, Any]) -> None:
-        names = {"spec": "spec (its digest)"}
-        differ = [key for key in self.identity if identity.get(key) != self.identity[key]]
-        if len(differ) > 1 and "spec" in differ:
-            differ.remove("spec")  # it holds seed, paths and steps too, which are easier to read
-        if differ:
-            found = ", ".join(f"{names.get(k, k)} {identity.get(k)} there, {self.identity[k]} asked" for k in differ)
-            raise EnsembleError(
-                f"{self.folder.path} holds an ensemble of another kind ({found}); "
-                "choose another OUT, or remove that one with --overwrite"
-            )
-
-    def _layout(self, workers: int, resume: bool) -> tuple[Chain, ...]:
-        """Chains of an unfinished render that is to go on, or new ones."""
-        plan = self.folder.read_json(PLAN)
-        if plan is not None:
-            self._refuse_other(plan.get("identity", {}))
-            if not resume:
-                raise EnsembleError(
-                    f"{self.folder.path} holds an unfinished render of this spec; "
-                    "go on with --resume, or begin again with --overwrite"
-                )
-            return tuple(tuple(Block(*block) for block in chain) for chain in plan["chains"])
-        found = self._manifest()
-        if found is not None:
-            blocks = [part.block for part in found.parts]
-            return tuple(tuple(chain) for _, chain in groupby(blocks, key=lambda block: block.first_path))
-        return chains(self.whole, row_bytes(self.columns), workers)
-
-    def _listed(self) -> set[str]:
-        """Names of parts that the manifest or the plan in the folder lists, which makes them ours."""
-        found = self._manifest()
-        names = {part.file for part in found.parts} if found is not None else set()
-        return names | set((self.folder.read_json(PLAN) or {}).get("files", ()))
-
-    def _remove_old(self) -> None:
-        """Remove the ensemble that is there: files that it lists or that say that they are ours."""
-        listed = self._listed()
-        ours = [name for name in self.folder.part_files() if name in listed or self._ours(name)]
-        self.folder.remove(([MANIFEST] if self.folder.size(MANIFEST) >= 0 else []) + ours)
-        self.folder.clean_state(keep_plan=False)
-
-    def _ours(self, name: str) -> bool:
-        try:
-            parquet.footer(self.folder.path / name)
-        except EnsembleError:
-            return False
-        return True
-
-    def _present(self, plan: Sequence[Chain], listed: set[str]) -> dict[Block, dict[str, Any]]:
-        """Records of the planned parts that are there and belong to this render."""
-        found = {}
-        files = set(self.folder.part_files())
-        for part in (part for chain in plan for part in chain):
-            name = part.file(self.whole)
-            if name not in files:
-                continue
-            try:
-                identity, nodes, _ = parquet.footer(self.folder.path / name)
-            except EnsembleError as error:
-                if name in listed:
-                    continue  # ours and damaged: it is drawn again
-                raise EnsembleError(f"{error}; it is in the way and not ours: move it away") from None
-            self._refuse_other(identity)
-            if identity.get("part") == asdict(part):
-                found[part] = {"part": asdict(part), "bytes": self.folder.size(name), "nodes": nodes}
-        return found
-
-    # what must be drawn
 
     def _draw(
         self, workers: int, resume: bool, overwrite: bool, progress: Progress | None, descriptor: int | None
-    ) -> OnDisk:
+    ) -> Manifest:
         if overwrite:
-            self._remove_old()
+            self.present.remove()
         self._refuse_too_large()
-        plan = self._layout(workers, resume)
-        there = self._present(plan, self._listed())
+        plan = self.present.chains(resume) or chains(self.whole, row_bytes(self.columns), workers)
+        there = self.present.records(plan)
         self.folder.clean_state(keep_plan=True)
-        files = [part.file(self.whole) for chain in plan for part in chain]
-        blocks = [[(b.first_path, b.paths, b.first_step, b.steps) for b in chain] for chain in plan]
-        self.folder.write_json(PLAN, {"identity": self.identity, "files": files, "chains": blocks})
-        self.folder.remove([MANIFEST] if self.folder.size(MANIFEST) >= 0 else [])
+        self.present.write_plan(plan)
+        self.folder.remove([MANIFEST])
 
         tasks, records = [], []
         for chain in plan:
@@ -289,8 +197,8 @@ class Job:
         records += engines.run(tasks, workers, progress, done, self.whole.rows, descriptor)
         made = self._make_manifest(records)
         self.folder.write_json(MANIFEST, made.json())
-        self.folder.finish()
-        return OnDisk(self.folder.path, made, self.spec)
+        self.folder.clean_state(keep_plan=False)
+        return made
 
     def _task(self, chain: Chain, start: int) -> Task:
         out = str(self.folder.path.absolute())

@@ -112,7 +112,7 @@ class Manifest:
                 why_not_portable=str(data["why_not_portable"]),
                 versions=dict(data["versions"]),
             )
-            _covers(manifest.parts, whole)
+            covers([part.block for part in manifest.parts], whole)
             if manifest.digest != data["digest"]:
                 raise ValueError("its digest does not follow from its series' digests")
             if set(manifest.stored) | set(manifest.revealed) != {column.name for column in manifest.columns}:
@@ -151,12 +151,11 @@ def _roots(data: Mapping[str, Any]) -> dict[str, str]:
     return dict(data)
 
 
-def _covers(parts: Sequence[PartRecord], whole: Block) -> None:
+def covers(parts: Sequence[Block], whole: Block) -> None:
     """ValueError unless the parts, chain by chain, are exactly `whole`."""
     path, step = whole.first_path, 0
     end = path
-    for part in parts:
-        block = part.block
+    for block in parts:
         if step == 0:
             end = block.end_path
         if (block.first_path, block.end_path, block.first_step) != (path, end, step) or block.rows == 0:

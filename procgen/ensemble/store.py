@@ -20,6 +20,7 @@ import numpy as np
 from procgen.ensemble.errors import EnsembleError, system_sentence
 
 MANIFEST = "manifest.json"
+PLAN = ".state/plan.json"
 PART = re.compile(r"paths-\d{9,}-\d{9,}(\.steps-\d{9,}-\d{9,})?\.parquet")
 PATIENCE = 3.0  # seconds: workers whose parent was killed are gone by then
 
@@ -116,16 +117,16 @@ class Folder:
                     raise EnsembleError(system_sentence(error, f"removing {entry}")) from None
 
     @contextlib.contextmanager
-    def locked(self) -> Iterator[int | None]:
+    def locked(self, patience: float = PATIENCE) -> Iterator[int]:
         """Hold OUT for this process and the workers that inherit the lock's file descriptor.
 
         The operating system drops the lock when the last of them ends, however it ends. Without `fcntl`
-        (Windows) nothing is locked.
+        (Windows) nothing is locked. At the end .state is removed, unless it holds a plan to go on with.
         """
         if self.state.is_symlink():
             raise EnsembleError(f"{self.state} is a link to another place; remove it, or choose another OUT")
         try:
-            descriptor = self._lock()
+            descriptor = self._lock(time.monotonic() + patience)
         except (NotADirectoryError, FileExistsError) as error:
             raise EnsembleError(f"{error.filename} is not a folder; choose another OUT") from None
         except OSError as error:
@@ -133,13 +134,14 @@ class Folder:
         try:
             yield descriptor
         finally:
-            if not (self.state / "plan.json").exists():
-                self.finish()
+            if not (self.path / PLAN).exists():
+                with contextlib.suppress(OSError):
+                    (self.state / "lock").unlink()
+                    self.state.rmdir()
             os.close(descriptor)
 
-    def _lock(self) -> int:
+    def _lock(self, give_up: float) -> int:
         path = self.state / "lock"
-        give_up = time.monotonic() + PATIENCE
         while True:
             self.state.mkdir(parents=True, exist_ok=True)
             try:
@@ -161,12 +163,11 @@ class Folder:
             os.close(descriptor)
             time.sleep(0.02)
 
-    def finish(self) -> None:
-        """Remove .state, its lock last; to be called while the lock is held."""
-        with contextlib.suppress(OSError, EnsembleError):
-            self.clean_state(keep_plan=False)
-            (self.state / "lock").unlink(missing_ok=True)
-            self.state.rmdir()
+    def tidy(self) -> None:
+        """Remove the .state of a render that was killed between its manifest and its end."""
+        if self.state.exists():
+            with contextlib.suppress(EnsembleError), self.locked(patience=0):
+                self.clean_state(keep_plan=False)
 
 
 def _try_lock(descriptor: int) -> bool:

@@ -1,6 +1,7 @@
 """Nothing half-written looks whole: kills, full disks, locks, other people's files."""
 
 import contextlib
+import json
 import os
 import random
 import shutil
@@ -9,10 +10,11 @@ import subprocess
 import time
 
 import numpy as np
+import pyarrow.parquet as pq
 import pytest
 
 from procgen.ensemble import EnsembleError, open_ensemble, plan
-from procgen.ensemble.parquet import footer
+from procgen.ensemble.parquet import NODES, footer
 from procgen.ensemble.plan import STEPS
 from procgen.ensemble.store import PART
 from tests.ensemble.fakes import fake_check, fake_render, fake_spec, start, visible
@@ -211,3 +213,57 @@ def test_a_missing_part_in_the_middle_of_a_chain_is_drawn_again(tmp_path, monkey
     again = fake_render(fake_spec(**LONG), tmp_path, resume=True)
     assert again.digest == made.digest
     assert np.array_equal(again["x"], made["x"])
+
+
+def test_what_a_kill_after_the_manifest_leaves_is_tidied_up(tmp_path):
+    spec = fake_spec(paths=20, steps=5)
+    fake_render(spec, tmp_path)
+    (tmp_path / ".state").mkdir()
+    for name in ("plan.json", "x.npz", "x.1.tmp", "lock"):
+        (tmp_path / ".state" / name).write_text("{}")
+    fake_render(spec, tmp_path)
+    assert not (tmp_path / ".state").exists()
+
+
+def test_a_state_folder_that_leads_elsewhere_or_holds_files_of_others_is_left_alone(tmp_path):
+    spec, elsewhere, out = fake_spec(paths=20, steps=5), tmp_path / "elsewhere", tmp_path / "out"
+    for folder in (elsewhere, out):
+        folder.mkdir()
+    (elsewhere / "plan.json").write_text("mine")
+    (out / ".state").symlink_to(elsewhere)
+    with pytest.raises(EnsembleError, match=r"\.state is a link to another place"):
+        fake_render(spec, out, overwrite=True)
+    assert (elsewhere / "plan.json").read_text() == "mine"
+    (out / ".state").unlink()
+    (out / ".state").mkdir()
+    (out / ".state" / "notes").write_text("mine")
+    fake_render(spec, out)
+    assert (out / ".state" / "notes").read_text() == "mine"
+
+
+def test_a_damaged_plan_is_said_and_can_be_overwritten(tmp_path):
+    spec = fake_spec(paths=20, steps=5)
+    made = fake_render(spec, tmp_path)
+    (tmp_path / "manifest.json").unlink()
+    (tmp_path / ".state").mkdir()
+    for parts in ([], [[0, 20, 0, 4]], "x", [["a"]]):
+        plan_text = json.dumps({"identity": made.manifest.identity, "files": [], "parts": parts})
+        (tmp_path / ".state" / "plan.json").write_text(plan_text)
+        with pytest.raises(EnsembleError, match=r"plan.json is damaged; begin again with --overwrite"):
+            fake_render(spec, tmp_path, resume=True)
+    assert fake_render(spec, tmp_path, overwrite=True).digest == made.digest
+
+
+def test_a_part_of_another_size_is_drawn_again_even_when_it_says_that_it_is_ours(tmp_path):
+    spec = fake_spec(paths=20, steps=5)
+    made = fake_render(spec, tmp_path)
+    path = tmp_path / made.manifest.parts[0].file
+    table = pq.read_table(path)
+    metadata = {**table.schema.metadata, NODES: pq.read_metadata(path).metadata[NODES]}
+    changed = table.set_column(2, table.schema.field("x"), [np.zeros(100)])
+    pq.write_table(changed.replace_schema_metadata(metadata), path)
+    with pytest.raises(EnsembleError, match=r"is damaged: \d+ bytes, expected \d+; draw it again with --resume"):
+        fake_render(spec, tmp_path)
+    again = fake_render(spec, tmp_path, resume=True)
+    assert again.digest == made.digest
+    assert fake_check(tmp_path).ok

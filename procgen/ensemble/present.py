@@ -1,0 +1,128 @@
+"""What is in OUT already: a finished ensemble, an unfinished one, another one, other people's files."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import asdict
+from itertools import groupby
+from typing import Any
+
+from procgen.ensemble import parquet
+from procgen.ensemble.ensemble import refuse_missing
+from procgen.ensemble.errors import EnsembleError
+from procgen.ensemble.manifest import Manifest, covers
+from procgen.ensemble.plan import Block, Chain
+from procgen.ensemble.store import MANIFEST, PLAN, Folder
+
+
+class Present:
+    """What a folder holds, seen by a render of `whole` that `identity` names."""
+
+    def __init__(self, folder: Folder, whole: Block, identity: Mapping[str, Any]):
+        self.folder, self.whole, self.identity = folder, whole, identity
+
+    def complete(self, resume: bool) -> Manifest | None:
+        """The manifest when all is there, None when there is something to draw.
+
+        Raises EnsembleError when it is another ensemble, or parts are missing and `resume` is not asked for.
+        """
+        found = self._manifest()
+        if found is None:
+            return None
+        self._refuse_other(found.identity)
+        try:
+            refuse_missing(self.folder, found)
+        except EnsembleError:
+            if not resume:
+                raise
+            return None
+        return found
+
+    def chains(self, resume: bool) -> tuple[Chain, ...] | None:
+        """The chains of the render that is there, None when there is none; they are kept when it goes on."""
+        found = self._manifest()
+        if found is not None:
+            return _chains([part.block for part in found.parts])
+        plan = self.folder.read_json(PLAN)
+        if plan is None:
+            return None
+        self._refuse_other(plan.get("identity", {}))
+        if not resume:
+            raise EnsembleError(
+                f"{self.folder.path} holds an unfinished render of this spec; "
+                "go on with --resume, or begin again with --overwrite"
+            )
+        try:
+            blocks = [Block(*map(int, numbers)) for numbers in plan["parts"]]
+            covers(blocks, self.whole)
+        except (KeyError, TypeError, ValueError):
+            raise EnsembleError(f"{self.folder.path / PLAN} is damaged; begin again with --overwrite") from None
+        return _chains(blocks)
+
+    def write_plan(self, chains: Sequence[Chain]) -> None:
+        parts = [part for chain in chains for part in chain]
+        blocks = [(part.first_path, part.paths, part.first_step, part.steps) for part in parts]
+        files = [part.file(self.whole) for part in parts]
+        self.folder.write_json(PLAN, {"identity": self.identity, "files": files, "parts": blocks})
+
+    def records(self, chains: Sequence[Chain]) -> dict[Block, dict[str, Any]]:
+        """Records of the parts that are there, whole, and of this render."""
+        found: dict[Block, dict[str, Any]] = {}
+        files, listed, sizes = set(self.folder.part_files()), self._listed(), self._sizes()
+        for part in (part for chain in chains for part in chain):
+            name = part.file(self.whole)
+            if name not in files:
+                continue
+            try:
+                identity, nodes, _ = parquet.footer(self.folder.path / name)
+            except EnsembleError as error:
+                if name in listed:
+                    continue  # ours and damaged: it is drawn again
+                raise EnsembleError(f"{error}; it is in the way and not ours: move it away") from None
+            self._refuse_other(identity)
+            size = self.folder.size(name)
+            if identity.get("part") == asdict(part) and sizes.get(name, size) == size:
+                found[part] = {"part": asdict(part), "bytes": size, "nodes": nodes}
+        return found
+
+    def remove(self) -> None:
+        """Remove the ensemble that is there: files that it lists or that say that they are ours."""
+        listed = self._listed()
+        ours = [name for name in self.folder.part_files() if name in listed or self._is_ours(name)]
+        self.folder.remove([MANIFEST, *ours])
+        self.folder.clean_state(keep_plan=False)
+
+    def _manifest(self) -> Manifest | None:
+        data = self.folder.read_json(MANIFEST)
+        return None if data is None else Manifest.read(data, str(self.folder.path / MANIFEST))
+
+    def _sizes(self) -> dict[str, int]:
+        found = self._manifest()
+        return {} if found is None else {part.file: part.bytes for part in found.parts}
+
+    def _listed(self) -> set[str]:
+        """Names of parts that the manifest or the plan in the folder lists, which makes them ours."""
+        return set(self._sizes()) | set((self.folder.read_json(PLAN) or {}).get("files", ()))
+
+    def _is_ours(self, name: str) -> bool:
+        try:
+            parquet.footer(self.folder.path / name)
+        except EnsembleError:
+            return False
+        return True
+
+    def _refuse_other(self, identity: Mapping[str, Any]) -> None:
+        names = {"spec": "spec (its digest)"}
+        differ = [key for key in self.identity if identity.get(key) != self.identity[key]]
+        if len(differ) > 1 and "spec" in differ:
+            differ.remove("spec")  # it holds seed, paths and steps too, which are easier to read
+        if differ:
+            found = ", ".join(f"{names.get(k, k)} {identity.get(k)} there, {self.identity[k]} asked" for k in differ)
+            raise EnsembleError(
+                f"{self.folder.path} holds an ensemble of another kind ({found}); "
+                "choose another OUT, or remove that one with --overwrite"
+            )
+
+
+def _chains(blocks: Sequence[Block]) -> tuple[Chain, ...]:
+    return tuple(tuple(chain) for _, chain in groupby(blocks, key=lambda block: block.first_path))
