@@ -22,7 +22,7 @@ if TYPE_CHECKING:
     from procgen.ensemble.errors import EnsembleError
     from procgen.ensemble.job import render
     from procgen.spec.model import Spec, SpecError
-    from procgen.theory.series import theory
+    from procgen.theory import theory
 
 __version__ = "0.1.0"
 
