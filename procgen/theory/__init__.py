@@ -6,13 +6,15 @@ from types import ModuleType
 from procgen.theory.axis import Axis
 from procgen.theory.expression import Expression
 from procgen.theory.garch import Garch
-from procgen.theory.series import CrossTheory, SeriesTheory, Theory, theory
+from procgen.theory.series import CrossTheory, SeriesTheory
 from procgen.theory.system import System
 from procgen.theory.unknown import Unknown
 from procgen.theory.verdict import Stationarity
+from procgen.theory.whole import Correlated, Theory, theory
 
 __all__ = [
     "Axis",
+    "Correlated",
     "CrossTheory",
     "Expression",
     "Garch",

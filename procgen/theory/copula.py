@@ -8,6 +8,8 @@ from typing import Any
 import numpy as np
 
 WIDEST = 37.5  # the normal density is still above the smallest double
+LAST_SHOCK = 8.0  # beyond it lies 1e-15 of the probability
+ACCURACY = 1e-9  # of the laws' own quantiles, as a share of the tail
 SMALLEST_TAIL = 1e-200  # SciPy's quantiles of heavy tails hold to here
 PANEL = 0.25
 TERMS = 400
@@ -18,7 +20,7 @@ def law_correlation(first: Any, second: Any, correlation: float) -> tuple[float,
 
     Parameters
     ----------
-    first, second : laws with ``distribution`` (a SciPy-like ``ppf`` and ``isf``) and ``gaussian``
+    first, second : laws
     correlation : correlation of the normals z1 and z2, in [-1, 1]
 
     With q(z) = sum of c_k He_k(z) / sqrt(k!), the answer is the sum of c_k d_k correlation^k (Mehler 1866; Cario &
@@ -32,7 +34,7 @@ def law_correlation(first: Any, second: Any, correlation: float) -> tuple[float,
     c, d = hermite_coefficients(first), hermite_coefficients(second)
     powers = correlation ** np.arange(TERMS)
     rests = [max(0.0, 1.0 - float((x * x).sum())) for x in (c, d)]
-    bound = abs(correlation) ** TERMS * float(np.sqrt(rests[0] * rests[1])) + 1e-13
+    bound = abs(correlation) ** TERMS * float(np.sqrt(rests[0] * rests[1])) + ACCURACY
     return float((c * d * powers).sum()), bound
 
 
@@ -44,9 +46,14 @@ def is_symmetric(law: Any) -> bool:
 
 
 def quantiles_of_normals(law: Any, z: np.ndarray) -> np.ndarray:
-    """q(z): the value of the law with the rank of a standard normal z, from the tail on its side."""
+    """q(z): the value of the law with the rank of a standard normal z, from the tail on its side.
+
+    A light tail is the law's own beyond the last uniform; a heavy one still counts there, and is SciPy's.
+    """
     from scipy.special import ndtr
 
+    if np.isinf(law.highest_moment):
+        return law.shocks_from_normals(np.clip(z, -LAST_SHOCK, LAST_SHOCK))
     ideal = law.distribution()
     tail = np.maximum(ndtr(-np.abs(z)), SMALLEST_TAIL)
     return np.where(z < 0, ideal.ppf(tail), ideal.isf(tail))

@@ -7,8 +7,7 @@ mean of a product of shocks is 0 unless each step occurs an even number of times
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-from itertools import product as choices
+from collections.abc import Callable, Sequence
 from math import comb
 
 import numpy as np
@@ -22,7 +21,6 @@ from procgen.theory.unknown import Unknown
 Sided = Sequence[tuple[Linear, int]]  # forms, each at the first (0) or the second (1) step
 LEFT_OUT = 1e-10  # share of a base's variance beyond the weights that are added up
 LONGEST = 1 << 20
-MOST_CHOICES = 4096
 
 
 def joint_cumulant(source: Source, forms: Sided, t: np.ndarray, s: np.ndarray) -> np.ndarray:
@@ -34,36 +32,39 @@ def joint_cumulant(source: Source, forms: Sided, t: np.ndarray, s: np.ndarray) -
     if cumulant == 0.0:
         return np.zeros(t.shape)
     depth = max(_depth(form) for form, _ in forms)
-    pairs = np.stack([t.ravel(), s.ravel()], axis=1)
-    if all(form.is_plain and all(isinstance(k, At) for k in form) for form, _ in forms):
-        pairs = pairs - pairs.min(axis=1, keepdims=True)  # only the lag matters
-    distinct, where = np.unique(pairs, axis=0, return_inverse=True)
-    sums = np.array([_sum_of_products(forms, steps, depth) for steps in distinct.tolist()])
-    return float(cumulant) * source.variance ** (order / 2) * sums[where.ravel()].reshape(t.shape)
+    sums = _over_distinct(forms, t, s, lambda steps: float(np.prod(_weights_at(forms, steps, depth), axis=0).sum()))
+    return float(cumulant) * source.variance ** (order / 2) * sums
 
 
 def garch_product(space: Space, source: Source, forms: Sided, t: np.ndarray, s: np.ndarray) -> np.ndarray:
-    """E of a product of 4 forms of finitely many delays of a garch with a symmetric law."""
-    if source.path is not None or any(not isinstance(k, At) or k.base.phi for form, _ in forms for k in form):
-        raise Unknown(f"fourth moments of a filter of the garch {source.key} have no closed form here")
-    if np.prod([len(form) for form, _ in forms], dtype=float) > MOST_CHOICES:
-        raise Unknown(f"fourth moments of a long moving average of {source.key}")
-    total = np.zeros(t.shape)
-    for keys in choices(*(form.items() for form, _ in forms)):
-        weight = float(np.prod([c for _, c in keys]))
-        steps = [(t, s)[side] - key.delay for (key, _), (_, side) in zip(keys, forms, strict=True)]
-        total = total + weight * _four_shocks(space, source, steps)
-    return total
+    """What E of a product of 4 forms of a garch with a symmetric law exceeds the Gaussian pairings by.
+
+    With S(u - v) = E e(u)^2 e(v)^2 the whole is the sum over u, v of S(u - v) times the three ways to put two of the
+    weights at u and two at v; that counts u = v three times instead of once.
+    """
+    if source.path is not None:
+        raise Unknown(f"fourth moments of {source.key}, which leaves from a given past")
+    depth = max(_depth(form) for form, _ in forms)
+    covariances = square_covariance(space, source, np.arange(1))
+
+    def excess(steps: list[int]) -> float:
+        nonlocal covariances
+        a, b, c, d = _weights_at(forms, steps, depth)
+        if len(covariances) < len(a):
+            covariances = square_covariance(space, source, np.arange(len(a)))
+        paired = sum(_quadratic(p, q, covariances) for p, q in ((a * b, c * d), (a * c, b * d), (a * d, b * c)))
+        return paired - 2.0 * float((a * b * c * d).sum()) * (float(covariances[0]) + source.variance**2)
+
+    return _over_distinct(forms, t, s, excess)
 
 
-def _four_shocks(space: Space, source: Source, steps: list[np.ndarray]) -> np.ndarray:
-    a, b, c, d = steps
-    cases = [(a == b) & (c == d), (a == c) & (b == d), (a == d) & (b == c)]
-    if not any(case.any() for case in cases):
-        return np.zeros(a.shape)
-    gap = np.select(cases, [a - c, a - b, a - b], default=0)
-    level = np.select(cases, [1.0, 1.0, 1.0], default=0.0)
-    return level * (square_covariance(space, source, np.abs(gap)) + source.variance**2)
+def _quadratic(p: np.ndarray, q: np.ndarray, covariances: np.ndarray) -> float:
+    """Sum over u, v of p(u) q(v) c(|u - v|)."""
+    from scipy.signal import correlate
+
+    by_lag = correlate(p, q)
+    middle = len(q) - 1
+    return float(by_lag[middle:] @ covariances[: len(p)] + by_lag[middle - 1 :: -1] @ covariances[1 : len(q)])
 
 
 def square_covariance(space: Space, source: Source, lags: np.ndarray) -> np.ndarray:
@@ -76,14 +77,21 @@ def square_covariance(space: Space, source: Source, lags: np.ndarray) -> np.ndar
     return covariance(space, form, form, lags, np.zeros_like(lags))
 
 
-def _sum_of_products(forms: Sided, steps: list[int], depth: int) -> float:
+def _over_distinct(forms: Sided, t: np.ndarray, s: np.ndarray, value: Callable[[list[int]], float]) -> np.ndarray:
+    """A function of two steps at all pairs; it is asked once a lag where only the lag matters."""
+    pairs = np.stack([t.ravel(), s.ravel()], axis=1)
+    if all(form.is_plain and all(isinstance(k, At) for k in form) for form, _ in forms):
+        pairs = pairs - pairs.min(axis=1, keepdims=True)
+    distinct, where = np.unique(pairs, axis=0, return_inverse=True)
+    return np.array([value(steps) for steps in distinct.tolist()])[where.ravel()].reshape(t.shape)
+
+
+def _weights_at(forms: Sided, steps: list[int], depth: int) -> np.ndarray:
+    """Weights of each form on the shocks from the later step back, (forms, shocks)."""
     top = max(steps)
     if top + depth > LONGEST:
         raise Unknown(f"weights on more than {LONGEST} shocks")
-    whole = np.ones(top + depth + 1)
-    for form, side in forms:
-        whole = whole * _weights(form, steps[side], top, len(whole))
-    return float(whole.sum())
+    return np.stack([_weights(form, steps[side], top, top + depth + 1) for form, side in forms])
 
 
 def _weights(form: Linear, step: int, top: int, count: int) -> np.ndarray:

@@ -24,6 +24,7 @@ import numpy as np
 
 from procgen.theory.arma import companion, cross_covariance, polynomial
 
+HIGHEST = 64.0  # moments of h are looked at up to this order
 ROOT_TOLERANCE = 1e-10
 SETTLED = 1e-16
 
@@ -127,23 +128,30 @@ class Garch:
             return float(np.nextafter(4.0, 5.0))
         return float(np.nextafter(2.0, 3.0)) if np.isfinite(self.variance) else 0.0
 
+    @property
+    def power_tailed(self) -> bool:
+        """Whether its tails are known to be power laws, so that its exponential has no finite mean."""
+        if np.isfinite(float(self.law.highest_moment)):
+            return True
+        return len(self.alpha) == 1 and len(self.beta) <= 1 and self.highest_moment < 2.0 * HIGHEST
+
     def _tail_index(self) -> float:
         from scipy.optimize import brentq
 
         a, b = self.alpha[0], self.beta[0] if self.beta else 0.0
         if a == 0.0:
             return np.inf
-        highest = min(float(self.law.highest_moment) / 2.0, 64.0)
+        highest = min(float(self.law.highest_moment) / 2.0, HIGHEST)
 
         def excess(s: float) -> float:
-            return expect(self.law, lambda z: (b + a * z * z) ** s) - 1.0
+            return expect(self.law, lambda z: np.exp(np.minimum(s * np.log(b + a * z * z), 700.0))) - 1.0
 
         low, high = 1e-3, 1.0
         while high < highest and excess(min(high, 0.999 * highest)) < 0.0:
             low, high = high, 2.0 * high
         high = min(high, 0.999 * highest)
         if excess(high) < 0.0:
-            return 2.0 * highest  # every moment up to the law's own, or up to order 128
+            return 2.0 * highest  # every moment that is looked at
         if excess(low) >= 0.0:
             return 0.0
         return 2.0 * brentq(excess, low, high, xtol=ROOT_TOLERANCE)

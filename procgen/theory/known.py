@@ -18,6 +18,7 @@ Steps = np.ndarray
 Function = Callable[[Steps], np.ndarray]
 LONGEST_SUM = 20_000_000  # a running sum without a closed form is added up to this step
 LONGEST_CYCLE = 1 << 20
+EARLIEST = 200_000  # steps before step 0 that a lag may read
 ROUNDING = 1e-12  # what is flat or straight to this share of its parts counts as such
 
 
@@ -167,8 +168,8 @@ def whole(key: tuple, at: Function, periods: frozenset[float] | None = None, not
 
 
 def observed(key: tuple, at: Function, horizon: int, name: str, period: float | None = None) -> Known:
-    """A function given as such: a constant or a straight line is recognised over the steps before `horizon`."""
-    steps = _looked_at(horizon)
+    """A function given as such; a constant or a straight line is recognised, up to `horizon` and before step 0."""
+    steps = np.concatenate([-_looked_at(EARLIEST)[:0:-1], _looked_at(horizon)])
     values = np.asarray(at(steps), float)
     if not np.isnan(values).any():
         line = _line(steps, values, ROUNDING * float(np.abs(values).max()))
@@ -179,7 +180,7 @@ def observed(key: tuple, at: Function, horizon: int, name: str, period: float | 
 
 
 def _looked_at(horizon: int) -> Steps:
-    steps = np.arange(min(max(horizon, 3), 1 << 16))
+    steps = np.arange(min(max(horizon, 3), 1 << 14))
     if horizon > len(steps):
         steps = np.concatenate([steps, np.linspace(len(steps), horizon, 1024).astype(np.int64)])
     return steps

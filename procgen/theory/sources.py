@@ -45,6 +45,13 @@ class Source:
         return self.kind == IID and bool(self.law.gaussian)
 
     @property
+    def power_tailed(self) -> bool:
+        """Whether its tails are known to be power laws."""
+        if self.kind in (GARCH, SQUARES):
+            return self.detail.power_tailed
+        return self.kind == IID and bool(np.isfinite(self.law.highest_moment))
+
+    @property
     def symmetric(self) -> bool:
         """Whether flipping all signs leaves its law as it is."""
         return self.kind in (IID, GARCH) and is_symmetric(self.law)

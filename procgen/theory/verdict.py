@@ -19,7 +19,7 @@ import numpy as np
 from procgen.theory.arma import spectral_radius
 from procgen.theory.expression import Expression, Term
 from procgen.theory.known import Known
-from procgen.theory.linear import Frozen, Key, Linear, Sum, base_of
+from procgen.theory.linear import At, Frozen, Key, Linear, Sum, base_of
 from procgen.theory.sources import GARCH, OPAQUE, SQUARES, Source, Space
 
 INFINITE = "infinite variance"
@@ -103,6 +103,9 @@ def _term(findings: _Findings, term: Term) -> None:
             findings.say(VARIES, f"a random part is multiplied by a known path ({why})")
     for form in (*term.factors, term.exponent):
         _form(findings, form)
+    for source in term.exponent.sources:
+        if source.power_tailed:
+            findings.say(INFINITE, f"an exponential of {source.key}, whose tails are power laws, has no finite mean")
     if term.summed is not None:
         _term(findings, term.summed)
         findings.say(GROWS, "a running sum of products or exponentials")
@@ -126,7 +129,7 @@ def _started(findings: _Findings, key: Key) -> None:
         findings.say(GROWS, f"explosive root of modulus {1.0 / radius:.6g} in {where}, run from a given past")
     elif radius > 1.0 - UNIT_ROOT:
         findings.say(GROWS, f"unit root in {where}")
-    elif base.phi or not _constant_path(base.source):
+    elif base.phi or (isinstance(key, At) and key.delay) or not _constant_path(base.source):
         findings.say(SETTLES, f"{where} leaves from a given past and forgets it")
 
 

@@ -143,13 +143,15 @@ def _few_moments(space, group, factors, tilts, t, s) -> Pair:
     """Moments of a group that is not Gaussian: orders 1 and 2, and 3 and 4 of a single source."""
     zero, order = np.zeros(t.shape), len(factors)
     if any(tilts):
-        raise Unknown(f"an exponential of {_names(group)} has no closed moments")
+        heavy = any(source.power_tailed for source in group)
+        why = "no finite mean: its tails are power laws" if heavy else "no closed moments"
+        raise Unknown(f"an exponential of {_names(group)} has {why}")
     if order == 1 or (order % 2 and all(source.symmetric for source in group)):
         return zero, zero  # flipping all signs turns an odd product round
     one = group[0] if len(group) == 1 else None
     if order == 4 and one is not None and one.kind == GARCH and one.symmetric:
-        whole = cumulants.garch_product(space, one, factors, t, s)
-        return _split(whole, _gaussian(space, factors, tilts, t, s), factors)
+        pair = _gaussian(space, factors, tilts, t, s)
+        return _split(sum(pair) + cumulants.garch_product(space, one, factors, t, s), pair, factors)
     if order > 2 and (order > 4 or one is None or one.kind != IID):
         raise Unknown(f"moments of order {order} of {_names(group)} are not known in closed form")
     pair = _gaussian(space, factors, tilts, t, s)

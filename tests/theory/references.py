@@ -29,6 +29,10 @@ class ReferenceLaw:
         scale = 1.0 / law.std()
         return getattr(stats, self.base)(*self.args, loc=-law.mean() * scale, scale=scale)
 
+    def shocks_from_normals(self, z):
+        law = self.distribution()
+        return np.where(z < 0, law.ppf(stats.norm.cdf(z)), law.isf(stats.norm.sf(z)))
+
     def expect(self, f):
         law = self.distribution()
         halves = (quad(lambda z: f(z) * law.pdf(z), *ends, limit=400)[0] for ends in ((-np.inf, 0), (0, np.inf)))

@@ -192,6 +192,26 @@ def test_linear_filters_of_a_garch_are_filters_of_white_noise(axis):
     assert moving.excess_kurtosis == pytest.approx(fourth / 1.25**2 - 3, rel=1e-10)
 
 
+@pytest.mark.parametrize("law", [NORMAL, student(9)], ids=lambda law: law.name)
+def test_kurtosis_of_an_autoregression_of_a_garch(axis, law):
+    """E x^4 = phi^4 E x^4 + 6 phi^2 m + E e^4 with m = E x(t-1)^2 h(t) from one more recursion: own derivation."""
+    phi, omega, a, b, kz = 0.7, 0.1, 0.1, 0.8, law.excess_kurtosis + 3
+    h2 = (1 - 0.81) / (1 - 0.81 - (kz - 1) * a * a)
+    m = (omega / (1 - phi**2) + (a * kz + b) * h2) / (1 - (a + b) * phi**2)
+    fourth = (6 * phi**2 * m + kz * h2) / (1 - phi**4)
+    x = SeriesTheory("x", axis.filtered(axis.garch("x.ar", law, omega, (a,), (b,)), (phi,)))
+    assert x.excess_kurtosis == pytest.approx(fourth * (1 - phi**2) ** 2 - 3, rel=1e-8)
+
+
+def test_kurtosis_of_a_walk_of_a_garch(axis):
+    """E of (e_1 + .. + e_n)^4 = n E e^4 + 3 sum over i != j of E e_i^2 e_j^2."""
+    x = SeriesTheory("x", axis.walk(axis.garch("x.walk", NORMAL, 0.1, (0.1,), (0.8,)), 0.0, 0.0))
+    _, kurtosis, squares = kronecker((0.1,), (0.8,), 0.1, 3.0)
+    n = 5
+    fourth = n * kurtosis + 3 * sum(1 + squares[abs(i - j)] for i in range(n) for j in range(n) if i != j)
+    assert x.excess_kurtosis_at(n) == pytest.approx(fourth / n**2 - 3, rel=1e-10)
+
+
 def test_filter_from_a_garch_with_a_given_past(axis):
     """Var x(t) = sum of psi_j^2 E h(t - j), written out."""
     garch = axis.garch("x.arma", NORMAL, 0.1, (0.1,), (0.8,), before_variance=(4.0,), before_shocks=(2.0,))

@@ -189,7 +189,7 @@ def test_unknown_has_a_reason(axis):
     x = axis.source("x.t", student(5), 1.0)
     e = SeriesTheory("e", x.exp())
     assert e.mean(0) is None and "x.t" in e.reason("mean")
-    assert e.stationarity.verdict == STRICT
+    assert "no finite mean" in e.reason("mean")
     six = SeriesTheory("s", axis.product((x, x, x)))
     assert six.variance(0) is None and "order 6" in six.reason("variance")
     nested = SeriesTheory("n", axis.product((x, x)).exp())

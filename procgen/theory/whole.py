@@ -1,0 +1,132 @@
+"""The theory of a whole spec: its series, their pairs, and the correlations that lie behind them."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field
+from functools import cached_property
+from typing import Any
+
+import numpy as np
+
+from procgen.theory.axis import Axis
+from procgen.theory.expression import Expression, opaque
+from procgen.theory.series import CrossTheory, SeriesTheory, plain
+from procgen.theory.sources import GARCH, Source, pairs
+from procgen.theory.unknown import Unknown
+
+
+@dataclass(frozen=True)
+class Correlated:
+    """One correlated pair: of its primary normals, and of its values where that is exact (else None and why)."""
+
+    leader: str
+    follower: str
+    normals: float
+    values: float | None
+    tolerance: float | None = None
+    reason: str | None = None
+
+
+@dataclass
+class Theory(Mapping[str, SeriesTheory]):
+    """The theory of every series of a spec, and of their pairs."""
+
+    series: dict[str, SeriesTheory]
+    names: tuple[str, ...] = ()  # of `correlation`, the leader first
+    axis: Axis = field(default_factory=Axis)
+
+    def __getitem__(self, name: str) -> SeriesTheory:
+        if name not in self.series:
+            raise KeyError(f"expected one of the series {', '.join(self.series)}, got {name!r}")
+        return self.series[name]
+
+    def __iter__(self):
+        return iter(self.series)
+
+    def __len__(self) -> int:
+        return len(self.series)
+
+    def cross(self, first: str, second: str) -> CrossTheory:
+        """Covariances between two series."""
+        return CrossTheory(self[first], self[second])
+
+    @cached_property
+    def correlated(self) -> tuple[Correlated, ...]:
+        """Every correlated pair of terms, the one that leads (first in `correlation`) first."""
+        sources = [self.axis.space.sources[name] for name in self.names if name in self.axis.space.sources]
+        return tuple(self._correlated(a, b) for a, b in pairs(sources) if self.axis.space.dependent(a, b))
+
+    def _correlated(self, a: Source, b: Source) -> Correlated:
+        normals = self.axis.space.normal_correlation(a, b)
+        if GARCH in (a.kind, b.kind):
+            try:
+                self.axis.space.covariance(a, b)
+            except Unknown as unknown:
+                return Correlated(a.key, b.key, normals, None, reason=unknown.reason)
+        value, tolerance = self.axis.space.law_correlation(a, b)
+        return Correlated(a.key, b.key, normals, value, tolerance)
+
+    def as_dict(self, at: Sequence[int], lags: int | Sequence[int] = 40) -> dict[str, Any]:
+        """What `procgen theory --json` prints."""
+        series = {name: theory.as_dict(at, lags) for name, theory in self.series.items()}
+        cross = [entry for a, b in pairs(self.series) if (entry := self._cross_entry(a, b, at))]
+        correlation = [
+            {"leader": c.leader, "follower": c.follower, "normals": c.normals, "values": c.values}
+            | ({"tolerance": c.tolerance} if c.reason is None else {"reason": c.reason})
+            for c in self.correlated
+        ]
+        return {"series": series, "cross": cross, "correlation": correlation}
+
+    def _cross_entry(self, a: str, b: str, at: Sequence[int]) -> dict[str, Any] | None:
+        space, steps = self.axis.space, np.asarray(at, np.int64)
+        left, right = (self.series[name].expression.sources for name in (a, b))
+        if not any(space.dependent(x, y) for x in left for y in right):
+            return None
+        cross = self.cross(a, b)
+        covariance = plain(cross.covariance(steps, steps))
+        entry = {"series": [a, b], "steps": steps.tolist(), "covariance": covariance}
+        if covariance is None:
+            return entry | {"reason": cross.reason()}
+        return entry | {"correlation": plain(cross.correlation(steps, steps))}
+
+
+def theory(spec: Any, graph: Any = None) -> Theory:
+    """The exact theory of a checked spec.
+
+    Parameters
+    ----------
+    spec : Spec
+    graph : the graph of its terms; built when not given
+
+    Each term writes its moments on one axis; a term without closed moments counts as unknown, with the reason.
+    """
+    if graph is None:
+        from procgen.terms.graph import build
+
+        graph = build(spec)
+    names, matrix = spec.correlation.names, spec.correlation.matrix
+    correlation = {
+        frozenset((names[i], names[j])): float(matrix[i][j])
+        for i in range(len(names))
+        for j in range(i)
+        if matrix[i][j]
+    }
+    axis = Axis(spec.time.steps, correlation)
+    memo: dict[int, Expression] = {}
+    series = {name: SeriesTheory(name, _moments(axis, graph.series[name], memo)) for name in spec.series}
+    return Theory(series, tuple(names), axis)
+
+
+def _moments(axis: Axis, node: Any, memo: dict[int, Expression]) -> Any:
+    if not hasattr(node, "term"):
+        return None  # a primary stream: the term that draws from it writes the source
+    if id(node) not in memo:
+        inputs = [x for part in node.inputs if (x := _moments(axis, part, memo)) is not None]
+        axis.at_work(node.name, node.term.values.get("period"))
+        try:
+            memo[id(node)] = node.term.moments(axis, *inputs)
+        except (Unknown, NotImplementedError) as unknown:
+            reason = str(unknown) or f"{node.term.kind} gives no closed moments"
+            memo[id(node)] = opaque(axis.space, inputs, f"{node.name}: {reason}")
+    return memo[id(node)]
