@@ -74,7 +74,7 @@ def gathered(plan: Plan, blocks: Blocks, progress: Tick | None = None, rows: int
 def plan_of(spec: Any, steps: int | None = None) -> Plan:
     """Everything that the pass over the data must know, from the spec's theory."""
     from procgen.terms.graph import build
-    from procgen.theory.series import theory
+    from procgen.theory import theory
 
     graph = build(spec)
     th = theory(spec, graph)
