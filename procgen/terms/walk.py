@@ -85,8 +85,8 @@ class RandomWalk(Term):
     def moments(self, axis, noise):
         if self.before is None:
             return axis.walk(noise, self.drift, self.start)
-        level = axis.filtered(noise, (1.0,), (), before_x=(self.before["x"][-1],), before_shocks=())
-        return level + axis.known(lambda steps: self.drift * (steps + 1.0))
+        level = axis.filtered(noise, (1.0,), (), before_x=tuple(self.before["x"]), before_shocks=())
+        return level + axis.known(lambda steps: self.drift * np.maximum(steps + 1.0, 0.0))
 
     def equation(self, *inputs):
         drift = f" {signed(self.drift, '')}" if self.drift else ""
