@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from procgen.chance.laws import LAWS
+from procgen.chance.laws import LAWS, Law
 from procgen.chance.streams import Stream
 from procgen.spec.reader import read_text
 from procgen.terms import catalogue
@@ -29,7 +29,7 @@ def jacobian(graph: Graph, steps: int, monkeypatch, width: int = 4096) -> dict[s
     """Response of every series to every primary normal that it uses, (steps, normals).
 
     Path 0 sees no shock at all, path k sees a single unit normal: what the value code does to it, less what it
-    does to nothing, is column k. For a linear Gaussian graph J J′ is therefore the exact covariance of the
+    does to nothing, is column k. For a linear graph (of shocks of any law) J J′ is therefore the exact covariance of the
     values as they are drawn, with no theory and no sampling in it.
     """
     places: dict[tuple, int] = {}
@@ -43,6 +43,8 @@ def jacobian(graph: Graph, steps: int, monkeypatch, width: int = 4096) -> dict[s
 
     with monkeypatch.context() as patch:
         patch.setattr(Stream, "uniforms", impulses)
-        patch.setattr("procgen.chance.laws.Normal.shocks", lambda self, u, out=None: u)
+        for law in (Law, *LAWS.values()):
+            patch.setattr(law, "shocks", lambda self, u, out=None: u)
+            patch.setattr(law, "shocks_from_normals", lambda self, z, out=None: z)
         values = draw(graph, 0, width, [steps])
     return {name: x[:, 1 : len(places) + 1] - x[:, :1] for name, x in values.items()}
