@@ -262,8 +262,8 @@ def _table(space: Space, m: Term, n: Term, rows: int, columns: int) -> np.ndarra
             inner = inner * (a.coefficient(t)[:, None] if axis == 0 else b.coefficient(s)[None, :])
             inner[(0, slice(None)) if axis == 0 else (slice(None), 0)] = 0.0
             return np.cumsum(inner, axis=axis)
-    t, s = np.meshgrid(np.arange(rows), np.arange(columns), indexing="ij")
-    return wick.joint(space, (m.factors, m.exponent), (n.factors, n.exponent), t, s)[1]
+    grid = np.meshgrid(np.arange(rows), np.arange(columns), indexing="ij")
+    return wick.joint(space, (m.factors, m.exponent), (n.factors, n.exponent), *grid)[1]
 
 
 def _table_size(steps: np.ndarray) -> int:

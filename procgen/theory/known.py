@@ -72,9 +72,12 @@ class Known:
     @property
     def periods(self) -> frozenset[float] | None:
         """Empty for a constant, the periods of what repeats, None for anything else."""
-        if self.slope or any(p.periods is None for p in self.pieces):
-            return None
-        return frozenset().union(*(p.periods for p in self.pieces))
+        whole: frozenset[float] = frozenset()
+        for piece in self.pieces:
+            if piece.periods is None:
+                return None
+            whole |= piece.periods
+        return None if self.slope else whole
 
     @property
     def notes(self) -> tuple[str, ...]:
@@ -118,12 +121,11 @@ class Known:
         for one, rest in ((self, other), (other, self)):
             if one.value is not None:
                 return rest.scaled(one.value)
-        both = self.periods is not None and other.periods is not None
+        mine, others = self.periods, other.periods
+        periods = None if mine is None or others is None else mine | others
         keys = sorted((self.key, other.key), key=repr)
         note = "; ".join(dict.fromkeys(self.notes + other.notes))
-        return whole(
-            ("*", *keys), lambda t: self.at(t) * other.at(t), self.periods | other.periods if both else None, note
-        )
+        return whole(("*", *keys), lambda t: self.at(t) * other.at(t), periods, note)
 
     def exp(self) -> Known:
         if self.value is not None:

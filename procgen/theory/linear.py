@@ -21,7 +21,7 @@ from __future__ import annotations
 from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass
 from math import comb
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
 
@@ -68,8 +68,8 @@ class Linear(Mapping[Key, float]):
 
     __slots__ = ("_coefficients", "_hash")
 
-    def __init__(self, coefficients: Mapping[Key, float] | Iterable[tuple[Key, float]] = ()):
-        self._coefficients = {key: c for key, c in dict(coefficients).items() if c != 0.0}
+    def __init__(self, coefficients: Mapping[Any, float] | None = None):
+        self._coefficients: dict[Key, float] = {key: c for key, c in (coefficients or {}).items() if c != 0.0}
         self._hash: int | None = None
 
     def __getitem__(self, key: Key) -> float:

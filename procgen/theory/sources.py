@@ -8,7 +8,6 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass, field
-from itertools import combinations
 from typing import Any
 
 import numpy as np
@@ -120,12 +119,13 @@ class Space:
         return law_correlation(a.law, b.law, self.normal_correlation(a, b))
 
     def _with_squares(self, a: Source, b: Source) -> float:
-        if a.kind == b.kind == SQUARES:
+        if a.owner and b.owner:
             raise Unknown(f"squares of the correlated {a.owner.key} and {b.owner.key} have no closed covariance")
-        squares, other = (a, b) if a.kind == SQUARES else (b, a)
-        if squares.owner.symmetric and other.symmetric:
+        garch, other = (a.owner, b) if a.owner else (b.owner, a)
+        assert garch is not None
+        if garch.symmetric and other.symmetric:
             return 0.0  # flipping every sign leaves the squares and turns the other one round
-        raise Unknown(f"{squares.owner.key} is skewed: its squares and {other.key} have no closed covariance")
+        raise Unknown(f"{garch.key} is skewed: its squares and {other.key} have no closed covariance")
 
 
 def _roots(source: Source) -> Iterable[Source]:
@@ -134,7 +134,3 @@ def _roots(source: Source) -> Iterable[Source]:
 
 def _named(source: Source) -> str:
     return source.owner.key + " squared" if source.owner else source.key
-
-
-def pairs(sources: Iterable[Source]) -> Iterable[tuple[Source, Source]]:
-    return combinations(sources, 2)

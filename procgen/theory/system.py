@@ -75,7 +75,7 @@ class System:
         return np.einsum("pi,pi->p", rows[gap_at[1]], seen[at[1]])
 
     def _advance(self, p: np.ndarray, now: int, step: int) -> np.ndarray:
-        while now < min(step, self.settles):
+        while self.noise_path is not None and now < min(step, self.settles):
             if now >= LONGEST_MARCH:
                 raise Unknown(f"the variance of a source has not settled after {LONGEST_MARCH} steps")
             block = np.arange(now + 1, min(step, self.settles, now + 4096) + 1)

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from functools import cached_property
+from itertools import combinations
 from typing import Any
 
 import numpy as np
@@ -12,7 +13,7 @@ import numpy as np
 from procgen.theory.axis import Axis
 from procgen.theory.expression import Expression, opaque
 from procgen.theory.series import CrossTheory, SeriesTheory, plain
-from procgen.theory.sources import GARCH, Source, pairs
+from procgen.theory.sources import GARCH, Source
 from procgen.theory.unknown import Unknown
 
 
@@ -55,7 +56,7 @@ class Theory(Mapping[str, SeriesTheory]):
     def correlated(self) -> tuple[Correlated, ...]:
         """Every correlated pair of terms, the one that leads (first in `correlation`) first."""
         sources = [self.axis.space.sources[name] for name in self.names if name in self.axis.space.sources]
-        return tuple(self._correlated(a, b) for a, b in pairs(sources) if self.axis.space.dependent(a, b))
+        return tuple(self._correlated(a, b) for a, b in combinations(sources, 2) if self.axis.space.dependent(a, b))
 
     def _correlated(self, a: Source, b: Source) -> Correlated:
         normals = self.axis.space.normal_correlation(a, b)
@@ -70,7 +71,7 @@ class Theory(Mapping[str, SeriesTheory]):
     def as_dict(self, at: Sequence[int], lags: int | Sequence[int] = 40) -> dict[str, Any]:
         """What `procgen theory --json` prints."""
         series = {name: theory.as_dict(at, lags) for name, theory in self.series.items()}
-        cross = [entry for a, b in pairs(self.series) if (entry := self._cross_entry(a, b, at))]
+        cross = [entry for a, b in combinations(self.series, 2) if (entry := self._cross_entry(a, b, at))]
         correlation = [
             {"leader": c.leader, "follower": c.follower, "normals": c.normals, "values": c.values}
             | ({"tolerance": c.tolerance} if c.reason is None else {"reason": c.reason})

@@ -11,7 +11,6 @@ E[M N] exceeds it by, so that a small covariance of large means is not a differe
 from __future__ import annotations
 
 from collections.abc import Sequence
-from functools import reduce
 from itertools import product as choices
 
 import numpy as np
@@ -45,7 +44,9 @@ def joint(
         raise Unknown(f"a moment of {len(factors)} factors; they are computed up to {MOST_FACTORS}")
     if len(m[0]) == len(n[0]) == 1 and not m[1] and not n[1]:
         return np.zeros(t.shape), covariance(space, m[0][0], n[0][0], t, s)
-    sources = reduce(lambda a, b: a | b, [f.sources for f, _ in factors] + [e.sources for e in exponents], {})
+    sources: dict[Source, None] = {}
+    for form in (*m[0], *n[0], *exponents):
+        sources |= form.sources
     groups = _groups(space, sources)
     total = np.zeros(t.shape), np.zeros(t.shape)
     for assignment in _assignments(factors, groups):
@@ -150,21 +151,21 @@ def _few_moments(space, group, factors, tilts, t, s) -> Pair:
         return zero, zero  # flipping all signs turns an odd product round
     one = group[0] if len(group) == 1 else None
     if order == 4 and one is not None and one.kind == GARCH and one.symmetric:
-        pair = _gaussian(space, factors, tilts, t, s)
-        return _split(sum(pair) + cumulants.garch_product(space, one, factors, t, s), pair, factors)
-    if order > 2 and (order > 4 or one is None or one.kind != IID):
-        raise Unknown(f"moments of order {order} of {_names(group)} are not known in closed form")
-    pair = _gaussian(space, factors, tilts, t, s)
+        apart, cross = _gaussian(space, factors, tilts, t, s)
+        return _split(apart + cross + cumulants.garch_product(space, one, factors, t, s), apart, factors)
     if order == 2:
-        return pair
-    return _split(sum(pair) + cumulants.joint_cumulant(one, factors, t, s), pair, factors)
+        return _gaussian(space, factors, tilts, t, s)
+    if order > 4 or one is None or one.kind != IID:
+        raise Unknown(f"moments of order {order} of {_names(group)} are not known in closed form")
+    apart, cross = _gaussian(space, factors, tilts, t, s)
+    return _split(apart + cross + cumulants.joint_cumulant(one, factors, t, s), apart, factors)
 
 
-def _split(whole: np.ndarray, gaussian: Pair, factors) -> Pair:
+def _split(whole: np.ndarray, apart: np.ndarray, factors) -> Pair:
     """The whole moment, apart and cross: apart is at most a product of two second moments, as if Gaussian."""
     if len({side for _, side in factors}) == 1:
         return whole, np.zeros(whole.shape)
-    return gaussian[0], whole - gaussian[0]
+    return apart, whole - apart
 
 
 def _refuse_uncentred(sources) -> None:
