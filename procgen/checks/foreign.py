@@ -162,7 +162,7 @@ class Table:
         bad = ~np.isfinite(numbers) | (numbers != np.rint(numbers)) | (np.abs(numbers) > 2**53)
         if bad.any():
             row = int(np.argmax(bad))
-            raise TableError(f"{self.where}: expected whole steps in {name}, got {column.iloc[row]!r} in row {row}")
+            raise TableError(f"{self.where}: expected whole steps in {name}, got {_cell(column, row)} in row {row}")
         step = numbers.astype(np.int64)
         lowest = int(step.min())
         if lowest == 1 and int(step.max()) == self.spec.time.steps:
@@ -175,12 +175,13 @@ class Table:
     def _timed(self, column: pd.Series, name: str) -> NDArray[np.int64]:
         import pandas as pd
 
-        times = pd.to_datetime(column, errors="coerce", utc=False, format="mixed")
-        if isinstance(times.dtype, np.dtype) and times.dtype == object:
+        try:
+            times = pd.to_datetime(column, errors="coerce", format="mixed")
+        except ValueError:  # offsets that differ, as across a change of clocks
             times = pd.to_datetime(column, errors="coerce", utc=True, format="mixed")
         if times.isna().any():
             row = int(np.argmax(times.isna().to_numpy()))
-            raise TableError(f"{self.where}: {column.iloc[row]!r} in row {row} of {name} is no time")
+            raise TableError(f"{self.where}: {_cell(column, row)} in row {row} of {name} is no time")
         naive = times.dt.tz is None
         utc = times.dt.tz_localize("UTC") if naive else times.dt.tz_convert("UTC")
         stamps = utc.dt.tz_localize(None).to_numpy().astype("datetime64[us]").astype(np.int64)
@@ -240,12 +241,18 @@ class Table:
         text = np.isnan(values) & column.notna().to_numpy()
         if text.any():
             row = int(np.argmax(text))
-            fault = f"{int(text.sum())} values are no numbers, the first {column.iloc[row]!r} in row {row}"
+            fault = f"{int(text.sum())} values are no numbers, the first {_cell(column, row)} in row {row}"
             self._checks.append(Check.fact(name, "numbers", "all rows", fault))
         return values
 
     def _say(self, what: str, note: str, outcome: str) -> None:
         self._checks.append(Check("", what, "all rows", "structure", outcome=outcome, note=note))
+
+
+def _cell(column: pd.Series, row: int) -> str:
+    """A cell as it is written."""
+    value = column.iloc[row]
+    return repr(value) if isinstance(value, str) else str(value)
 
 
 def _looks_like_times(column: pd.Series) -> bool:

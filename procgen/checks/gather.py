@@ -120,7 +120,8 @@ class Gather:
     def _tile(self, lane: Lane, tiles: Sequence[NDArray]) -> None:
         scores: dict[str, NDArray] = {}
         for column, (plan, x) in enumerate(zip(self.plan.series, tiles, strict=True)):
-            self.structure.absorb(column, x, lane.first_path, lane.step, lane.prints[column])
+            if not self.structure.absorb(column, x, lane.first_path, lane.step, lane.prints[column]):
+                x = np.where(np.isfinite(x), x, np.nan)  # named there; from here on the path is left out
             self._probe(lane, column, x)
             self._pool(lane, column, x)
             if not self.plan.precision[column].random:

@@ -81,6 +81,7 @@ class ShockSums:
         part = ShockLane(lane.scores[:, usable], lane.total[usable], lane.square[usable], lane.length)
         g[first:, usable] = self._add(z[first:][:, usable], first_step + first, part)
         lane.total[usable], lane.square[usable], lane.length = part.total, part.square, part.length
+        lane.total[~usable] = np.nan  # what is broken once is left out of the sums by path
         lane.scores = np.full((len(part.scores), z.shape[1]), np.nan)
         lane.scores[:, usable] = part.scores
         return g

@@ -83,7 +83,7 @@ def bar(log_p: float, level: float) -> str:
     """−log₁₀ p as a bar of _BAR letters with the level marked."""
     size = -log_p / math.log(10)
     mark = _BAR * 2 // 3
-    filled = min(_BAR, round(size / level * mark))
+    filled = round(min(_BAR, size / level * mark))
     return "".join("│" if k == mark and filled <= mark else ("█" if k < filled else "·") for k in range(_BAR))
 
 

@@ -1,0 +1,94 @@
+"""Our own ensembles: values are also held against the digests of the manifest."""
+
+import json
+
+import numpy as np
+import pyarrow as pa
+import pyarrow.parquet as pq
+import pytest
+
+from procgen.checks.validate import validate
+from procgen.ensemble import open_ensemble, render
+from procgen.ensemble.source import read_spec
+
+RAW = {
+    "procgen": 1,
+    "title": "A small one",
+    "seed": 9,
+    "paths": 40,
+    "time": {"steps": 80},
+    "series": {"x": [{"ar": {"phi": 0.6, "sd": 1}}], "y": {"decimals": 2, "of": [{"white_noise": {"sd": 1}}]}},
+}
+
+
+@pytest.fixture
+def out(tmp_path):
+    render(read_spec(RAW), out=tmp_path / "ens")
+    return tmp_path / "ens"
+
+
+def rewritten(out, change):
+    """Change the table of the only part, and the size that the manifest records."""
+    (file,) = out.glob("*.parquet")
+    table = change(pq.read_table(file))
+    pq.write_table(table, file)
+    manifest = json.loads((out / "manifest.json").read_text())
+    manifest["parts"][0]["bytes"] = file.stat().st_size
+    (out / "manifest.json").write_text(json.dumps(manifest))
+
+
+def test_an_untouched_ensemble_agrees(out):
+    ticks = []
+    verdict = validate(out, progress=lambda done, rows: ticks.append((done, rows)))
+    assert verdict.agrees is True
+    assert ticks[-1] == (40 * 80, 40 * 80)
+    assert verdict.about["digest"] == open_ensemble(out).digest
+    assert any(row.what == "digest" and row.outcome == "agrees" for row in verdict.rows)
+
+
+def test_in_memory_and_by_paths(out):
+    assert validate(render(read_spec(RAW))).agrees is True
+    assert validate(open_ensemble(out).paths(5, 30)).agrees is True
+
+
+def test_one_changed_value_is_found_by_its_digest(out):
+    def change(table):
+        x = table.column("x").to_numpy().copy()
+        x[1234] = np.nextafter(x[1234], 9)
+        return table.set_column(table.schema.get_field_index("x"), table.schema.field("x"), pa.array(x))
+
+    rewritten(out, change)
+    verdict = validate(out)
+    assert verdict.agrees is False
+    assert verdict.headline[0].startswith("x: structure: ")
+    assert "path 15, step 34" in verdict.headline[0]
+
+
+def test_rows_out_of_order(out):
+    def change(table):
+        order = np.arange(table.num_rows)
+        order[100:110] = order[100:110][::-1]
+        return table.take(order).cast(table.schema)
+
+    rewritten(out, change)
+    verdict = validate(out)
+    assert verdict.agrees is False
+    assert verdict.headline[0].startswith("structure: ")
+    assert "where path 1, step 20 belongs, column step has 29" in verdict.headline[0]
+
+
+def test_another_spec_is_held_against_it(out):
+    wrong = json.loads(json.dumps(RAW))
+    wrong["series"]["x"][0]["ar"]["phi"] = 0.2
+    verdict = validate(out, read_spec(wrong))
+    assert verdict.headline[0].startswith("x: memory")
+    wrong["series"]["z"] = wrong["series"].pop("x")
+    with pytest.raises(ValueError, match="has no series z; it has x, y"):
+        validate(out, read_spec(wrong))
+
+
+def test_false_alarm_must_be_a_probability(out):
+    with pytest.raises(ValueError, match="between 0 and 1, got 2"):
+        validate(out, false_alarm=2)
+    with pytest.raises(ValueError, match="expected an ensemble, a DataFrame, or the path of one, got int"):
+        validate(3)

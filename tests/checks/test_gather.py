@@ -1,0 +1,114 @@
+"""One pass: how the data are cut does not matter, parts merge, and what is spoiled is named."""
+
+import numpy as np
+import pytest
+
+from procgen.checks.gather import Gather
+from procgen.checks.validate import gathered, judged, plan_of
+from procgen.checks.verdict import Verdict
+from tests.studies.departures import draw, spec_of
+
+BODY = {
+    "series": {
+        "x": [{"constant": 2}, {"ar": {"phi": 0.6, "sd": 1}}, {"random_walk": {"sd": 0.2}}],
+        "y": [{"garch": {"sd": 1, "alpha": 0.1, "beta": 0.8}}],
+        "fixed": [{"trend": {"level": 1, "slope": 0.5}}],
+    },
+    "correlation": [{"between": ["x.ar", "y.garch"], "value": 0.3}],
+}
+PATHS, STEPS = 120, 90
+
+
+@pytest.fixture(scope="module")
+def plan():
+    return plan_of(spec_of(BODY, PATHS, STEPS, 1))
+
+
+@pytest.fixture(scope="module")
+def values():
+    return draw(spec_of(BODY, PATHS, STEPS, 1))
+
+
+def cut(values, path_cuts, step_cuts):
+    for a, b in zip([0, *path_cuts], [*path_cuts, PATHS], strict=True):
+        for s, t in zip([0, *step_cuts], [*step_cuts, STEPS], strict=True):
+            yield a, s, {name: x[a:b, s:t] for name, x in values.items()}
+
+
+def rows(gather):
+    return {(c.series, c.what, c.probe): c for c in Verdict(list(judged(gather)), 0.001).rows}
+
+
+def same(one, other, but=()):
+    assert one.keys() == other.keys()
+    for key, check in one.items():
+        if not any(word in key[1] for word in but):
+            assert other[key].outcome == check.outcome, key
+            if check.log_p is not None:
+                assert other[key].log_p == pytest.approx(check.log_p, rel=1e-6, abs=1e-9), key
+
+
+def test_a_true_ensemble_agrees(plan, values):
+    assert Verdict(list(judged(gathered(plan, cut(values, [], [])))), 0.001).agrees is True
+
+
+@pytest.mark.parametrize("steps", [[1], [33, 40, 88]], ids=str)
+def test_cutting_along_steps_does_not_matter(plan, values, steps):
+    same(rows(gathered(plan, cut(values, [], []))), rows(gathered(plan, cut(values, [], steps))))
+
+
+def test_cutting_between_paths_only_loses_the_pairs_across_the_cut(plan, values):
+    whole, parts = rows(gathered(plan, cut(values, [], []))), rows(gathered(plan, cut(values, [16, 50], [20])))
+    same(whole, parts, but=("neighbouring",))
+
+
+def test_parts_merge(plan, values):
+    pieces = list(cut(values, [64], []))
+    left, right = (gathered(plan, [piece]) for piece in pieces)
+    right.merge(left)  # in either order
+    same(rows(gathered(plan, pieces)), rows(right))
+
+
+def test_blocks_out_of_turn_are_refused(plan, values):
+    pieces = list(cut(values, [], [30, 60]))
+    gather = Gather(plan)
+    gather.absorb(*pieces[0])
+    with pytest.raises(ValueError, match="in the order of their steps, got step 60 of paths 0–119 out of turn"):
+        gather.absorb(*pieces[2])
+
+
+def test_a_value_that_is_not_finite_is_named_and_the_rest_judged(plan, values):
+    spoiled = {name: x.copy() for name, x in values.items()}
+    spoiled["x"][7, 40] = np.inf
+    spoiled["y"][3, 5] = np.nan
+    found = rows(gathered(plan, cut(spoiled, [], [45])))
+    assert found["x", "finite values", "all steps"].note == "1 value is not finite, the first at path 7, step 40"
+    assert found["y", "finite values", "all steps"].note == "1 value is not finite, the first at path 3, step 5"
+    departs = {key for key, check in found.items() if check.outcome == "departs"}
+    assert departs == {("x", "finite values", "all steps"), ("y", "finite values", "all steps")}
+
+
+def test_a_known_series_must_be_its_mean(plan, values):
+    spoiled = {name: x.copy() for name, x in values.items()}
+    spoiled["fixed"][5, 9] += 0.25
+    check = rows(gathered(plan, cut(spoiled, [], [])))["fixed", "values", "all steps"]
+    assert check.outcome == "departs"
+    assert check.estimate == pytest.approx(0.25)
+
+
+def test_every_step_of_one_path():
+    body = [{"ar": {"phi": 0.5, "sd": 1}}]
+    values = draw(spec_of(body, 1, 1500, 2))
+    verdict = Verdict(list(judged(gathered(plan_of(spec_of(body, 1, 1500, 2)), [(0, 0, values)]))), 0.001)
+    assert verdict.agrees is True
+    assert not any(row.what == "variance" and row.outcome == "agrees" for row in verdict.rows)
+
+
+def test_memory_does_not_grow_with_paths(plan, values):
+    # What is kept after 10 times the paths is the same but for fingerprints, 8 bytes a path and series, and samples.
+    gather = Gather(plan)
+    for k in range(10):
+        gather.absorb(k * PATHS, 0, values)
+    assert not gather.lanes
+    assert gather.moments.scatter.shape == (plan.offset[-1], plan.offset[-1])
+    assert sum(rows.nbytes for _, rows in gather.structure.prints) == 10 * PATHS * 3 * 8

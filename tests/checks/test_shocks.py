@@ -1,0 +1,105 @@
+"""Sums over recovered shocks: tiles and merging do not matter, and every test made of them is calibrated."""
+
+import math
+from collections import defaultdict
+
+import numpy as np
+import pytest
+from scipy import stats
+
+from procgen.chance.laws import LAWS
+from procgen.checks.judge_shocks import cross_checks, shock_checks
+from procgen.checks.scores import BINS, Scores, bin_counts
+from procgen.checks.shocks import CrossSums, ShockLane, ShockSums
+
+NORMAL, STUDENT = LAWS["normal"](), LAWS["student_t"](df=6)
+SCORES = {law: Scores(law) for law in (NORMAL, STUDENT)}
+
+
+def summed(z, law=NORMAL, tiles=(10_000,)):
+    sums, lane, at = ShockSums(SCORES[law], len(z)), ShockLane.start(z.shape[1]), 0
+    while at < len(z):
+        size = tiles[at % len(tiles)]
+        sums.absorb(z[at : at + size], at, lane)
+        at += size
+    sums.finish(lane)
+    return sums
+
+
+def checks_of(sums):
+    return {f"{c.what} {c.probe.split(':')[0]}": c for c in shock_checks("x", sums, "")}
+
+
+def test_tiles_do_not_matter():
+    z = np.random.default_rng(1).standard_normal((400, 30))
+    whole, parts = checks_of(summed(z)), checks_of(summed(z, tiles=(17, 5, 64)))
+    for name, check in whole.items():
+        assert parts[name].log_p == pytest.approx(check.log_p, rel=1e-9), name
+
+
+def test_merged_sums_are_the_sums_of_both():
+    z = np.random.default_rng(2).standard_normal((200, 40))
+    left, right = summed(z[:, :25]), summed(z[:, 25:])
+    left.merge(right)
+    whole = summed(z)
+    for name, check in checks_of(whole).items():
+        if "neighbouring" not in name:  # the pair across the cut is not seen
+            assert checks_of(left)[name].log_p == pytest.approx(check.log_p, rel=1e-9), name
+
+
+def test_unknown_first_steps_and_broken_paths_are_left_out():
+    z = np.random.default_rng(3).standard_normal((100, 6))
+    spoiled = np.vstack([np.full((3, 6), np.nan), z])
+    spoiled[50, 2] = np.nan
+    whole = np.delete(z, 2, axis=1)
+    assert summed(spoiled).n == whole.size
+    assert checks_of(summed(spoiled))["shocks: variance all steps"].estimate == pytest.approx(whole.var(ddof=1))
+
+
+@pytest.mark.parametrize(("law", "shape"), [(NORMAL, (60, 25)), (STUDENT, (100, 20))])
+def test_every_test_is_calibrated(law, shape):
+    # 300 draws: the count of p below 0.1 and 0.01 is binomial, held to the interval that leaves 1e-9 outside.
+    rng, found = np.random.default_rng(4), defaultdict(list)
+    for _ in range(300):
+        for name, check in checks_of(summed(law.distribution().rvs(size=shape, random_state=rng), law)).items():
+            found[name].append(check.log_p)
+    assert len(found) >= 20
+    for name, log_ps in found.items():
+        for level in (0.1, 0.01):
+            count = np.count_nonzero(np.array(log_ps) <= math.log(level))
+            low, high = stats.binom.ppf(5e-10, 300, level), stats.binom.isf(5e-10, 300, level)
+            assert low <= count <= high, (name, level, count)
+
+
+def test_components_are_orthonormal_and_blind_to_level_and_spread():
+    c = SCORES[STUDENT].components
+    np.testing.assert_allclose(c.T @ c / BINS, np.eye(8), atol=1e-10)
+    law = STUDENT.distribution()
+    z = law.ppf((np.arange(400_000) + 0.5) / 400_000)
+    for moved in (z + 0.01, z * 1.01):
+        answer = bin_counts(law.cdf(moved)) @ c / 400_000
+        assert np.abs(answer[2:]).max() < 0.05 * np.abs(answer[:2]).max()
+
+
+def test_normal_scores_against_scipy():
+    z = np.concatenate([np.linspace(-30, 30, 1001), [1e-9, 15.9999, -16.0001]])
+    law = stats.t(6, scale=math.sqrt(4 / 6))
+    exact = np.where(z < 0, stats.norm.ppf(law.cdf(z)), stats.norm.isf(law.sf(z)))
+    np.testing.assert_allclose(SCORES[STUDENT].normal_scores(z), exact, atol=2e-7)
+
+
+def test_correlation_between_series_is_calibrated_and_found():
+    rng, p = np.random.default_rng(5), []
+    for _ in range(400):
+        a = rng.standard_normal((30, 20))
+        b = 0.4 * a + math.sqrt(1 - 0.16) * rng.standard_normal((30, 20))
+        sums = CrossSums()
+        carry = sums.absorb(a[:11], b[:11], None)
+        sums.absorb(a[11:], b[11:], carry)
+        checks = {c.probe: c for c in cross_checks("x ~ y", sums, {0: 0.4})}
+        p.append([checks[probe].log_p for probe in ("same step", "lag +1", "lag -2")])
+    for column in np.array(p).T:
+        count = np.count_nonzero(column <= math.log(0.05))
+        assert stats.binom.ppf(5e-9, 400, 0.05) <= count <= stats.binom.isf(5e-9, 400, 0.05)
+    wrong = {c.probe: c for c in cross_checks("x ~ y", sums, {0: -0.4})}
+    assert wrong["same step"].log_p < math.log(1e-12)

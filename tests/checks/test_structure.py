@@ -1,0 +1,69 @@
+"""Facts about values: precision, copies, and how certain a copy is."""
+
+import numpy as np
+
+from procgen.checks.structure import Precision, Structure, fingerprint
+
+
+def looked_at(x, decimals=None, kind="float64", chance=0.0, tiles=(1000,)):
+    structure = Structure([Precision("x", kind, decimals, True)])
+    prints, at = np.zeros(x.shape[0], dtype=np.uint64), 0
+    while at < x.shape[1]:
+        size = tiles[at % len(tiles)]
+        structure.absorb(0, np.ascontiguousarray(x[:, at : at + size].T), 0, at, prints)
+        at += size
+    structure.close(0, prints[:, None])
+    return {c.what: c for c in structure.checks({"x": chance})}
+
+
+def noise(paths=50, steps=40, seed=1):
+    return np.random.default_rng(seed).standard_normal((paths, steps))
+
+
+def test_untouched_values_pass():
+    assert {c.outcome for c in looked_at(noise()).values()} == {"agrees"}
+
+
+def test_copies_are_found_wherever_they_are():
+    x = noise()
+    x[49], x[20] = x[3], x[11]
+    check = looked_at(x, tiles=(7, 1))["copied paths"]
+    assert check.outcome == "departs"
+    assert check.note == "2 paths repeat another one bit for bit, such as paths 11 and 20"
+
+
+def test_paths_that_differ_in_one_bit_are_no_copies():
+    x = noise()
+    x[20] = x[11]
+    x[20, 17] = np.nextafter(x[20, 17], 2)
+    assert looked_at(x)["copied paths"].outcome == "agrees"
+
+
+def test_whole_numbers_do_not_collide():
+    # 20,000 paths of four whole numbers below 4,000: equal prints by chance have probability 1e-11.
+    x = np.random.default_rng(2).permutation(20_000 * 4).reshape(20_000, 4).astype(float)
+    assert len(np.unique(fingerprint(x.T, 0, 0))) == 20_000
+
+
+def test_copies_by_rounding_cannot_be_judged():
+    x = np.rint(noise(200, 2))
+    check = looked_at(x, decimals=0, chance=0.1)["copied paths"]
+    assert check.outcome == "untestable"
+    assert "rounding makes some" in check.note
+
+
+def test_decimals():
+    x = np.rint(noise() * 100) / 100
+    assert looked_at(x, decimals=2)["precision"].outcome == "agrees"
+    x[4, 9] += 0.001
+    check = looked_at(x, decimals=2)["precision"]
+    assert check.note == "1 value has more than the 2 decimals declared, the first at path 4, step 9"
+    big = np.rint(noise() * 1e9 + 1e9) / 100
+    assert looked_at(big, decimals=2)["precision"].outcome == "agrees"
+
+
+def test_a_detour_through_float32():
+    x = noise()
+    assert "float32" in looked_at(x.astype(np.float32).astype(float))["precision"].note
+    assert looked_at(x.astype(np.float32).astype(float), kind="float32")["precision"].outcome == "agrees"
+    assert "finer than float32" in looked_at(x, kind="float32")["precision"].note

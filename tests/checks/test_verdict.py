@@ -1,0 +1,110 @@
+"""Holm's procedure, outcomes, the JSON shape, and the words."""
+
+import json
+
+import numpy as np
+import pytest
+from statsmodels.stats.multitest import multipletests
+
+from procgen.checks.judge import Sample, normal_mean, sample_mean, unit
+from procgen.checks.verdict import COLUMNS, Check, Verdict, holm
+
+
+def test_holm_of_four():
+    # REFERENCES 12.9, Holm (1979), computed.
+    np.testing.assert_allclose(holm([0.01, 0.04, 0.03, 0.005]), [0.03, 0.06, 0.06, 0.02])
+
+
+def test_holm_of_fifteen():
+    # REFERENCES 12.10, data of Benjamini & Hochberg (1995), section 3.2.
+    p = [
+        0.0001,
+        0.0004,
+        0.0019,
+        0.0095,
+        0.0201,
+        0.0278,
+        0.0298,
+        0.0344,
+        0.0459,
+        0.3240,
+        0.4262,
+        0.5719,
+        0.6528,
+        0.759,
+        1,
+    ]
+    adjusted = holm(p)
+    np.testing.assert_allclose(adjusted[:9], [0.0015, 0.0056, 0.0247, 0.114, 0.2211, 0.278, 0.278, 0.278, 0.3213])
+    assert (adjusted[9:] == 1).all()
+    assert np.count_nonzero(adjusted <= 0.05) == 3
+
+
+def test_holm_against_statsmodels():
+    p = np.random.default_rng(1).random(40) ** 3
+    np.testing.assert_allclose(holm(p), multipletests(p, method="holm")[1], rtol=1e-12)
+    assert holm([]).size == 0
+
+
+def check(z, kind="memory", series="x", what="shocks: autocorrelation", probe="lag 1"):
+    return Check.of(series, what, probe, kind, unit(z, 0.001))
+
+
+def test_outcomes_and_order():
+    rows = [check(1.0), check(9.0), Check("x", "covariance", "", "memory", outcome="untestable", note="no variance")]
+    verdict = Verdict(rows, 0.001)
+    assert verdict.agrees is False
+    assert verdict.verdict == "departs"
+    assert verdict.counts == {"departs": 1, "agrees": 1, "untestable": 1}
+    assert [row.outcome for row in verdict.rows] == ["departs", "agrees", "untestable"]
+
+
+def test_nothing_judged_is_no_agreement():
+    verdict = Verdict([Check("x", "moments", "", "level", outcome="untestable", note="no variance")], 0.001)
+    assert verdict.agrees is None
+    assert verdict.verdict == "untestable"
+    facts_alone = Verdict([Check.fact("x", "finite values", "all steps", "")], 0.001)
+    assert facts_alone.agrees is None
+
+
+def test_what_cannot_be_trusted_leaves_the_family():
+    skewed = Check.of("x", "variance", "step 9", "spread", sample_mean(Sample(150, 0.0, 1.4, 2.8, 12.0), 1.0))
+    verdict = Verdict([skewed, check(2.0)], 0.001)
+    assert skewed.outcome == "untestable"
+    assert "too few" in skewed.note
+    assert skewed.p is None
+    assert verdict.agrees is True
+    assert verdict.rows[0].detectable == pytest.approx(0.001 * (3.2905 + 1.2816), rel=1e-3)  # level 0.001 / 1
+
+
+def test_json_has_the_published_shape():
+    rows = [check(9.0), Check("y", "mean", "step 0", "level", theory=float("inf"), outcome="reported", note="a reason")]
+    data = json.loads(Verdict(rows, 0.01).to_json())
+    assert list(data) == ["verdict", "false_alarm", "checks"]
+    assert data["verdict"] == "departs"
+    assert data["false_alarm"] == 0.01
+    assert [tuple(row) for row in data["checks"]] == [COLUMNS, COLUMNS]
+    assert data["checks"][1]["theory"] is None
+    assert 0 <= data["checks"][0]["p"] < 1e-15
+
+
+def test_table_has_a_row_a_check():
+    verdict = Verdict([check(0.5), check(1.5)], 0.001)
+    assert list(verdict.checks.columns) == list(COLUMNS)
+    assert len(verdict.checks) == 2
+
+
+def test_headline_names_series_and_kind_the_largest_first():
+    rows = [
+        check(9.0),
+        check(12.0, kind="spread", what="shocks: variance", probe="all steps"),
+        check(30.0, series="y", kind="level", what="mean", probe="step 4"),
+        Check.fact("z", "finite values", "all steps", "1 value is not finite, the first at path 3, step 4"),
+        Check.of("x", "mean", "step 1", "level", normal_mean(0.0, 0.0, 1.0, 5)),
+    ]
+    assert Verdict(rows, 0.001).headline == [
+        "z: structure: 1 value is not finite, the first at path 3, step 4",
+        "y: level: the mean is not the one stated (mean at step 4 is 0.03, stated 0, p 1e−198)",
+        "x: spread: the variance is not the one stated (shocks: variance at all steps is 0.012, stated 0, p 1e−33); "
+        "also memory, which may follow from it",
+    ]

@@ -1,0 +1,84 @@
+"""A verdict as text and as a page."""
+
+from html.parser import HTMLParser
+
+import pytest
+
+from procgen.checks.judge import unit
+from procgen.checks.verdict import Check, Verdict
+from procgen.report.html import verdict_page
+from procgen.report.text import CAUTION, bar
+
+ABOUT = {"title": "<b>Cold</b> & store", "paths": 2000, "steps": 500, "digest": "ab" * 32, "spec_digest": "cd" * 32}
+
+
+def verdict(z=(1.0, 9.0)):
+    rows = [Check.of("load", "shocks: variance", "all steps", "spread", unit(x, 0.001, theory=1.0)) for x in z]
+    rows.append(Check("x<script>", "covariance", "", "memory", outcome="untestable", note="no <variance> & more"))
+    return Verdict(rows, 0.001, ABOUT)
+
+
+def test_text_says_it_all():
+    text = verdict().to_text()
+    assert text.startswith("DEPARTS from what the spec states\n  load: spread: the variance is not the one stated")
+    assert "2,000 paths × 500 steps; 3 checks: 1 agrees, 1 departs, 1 untestable" in text
+    assert "a shock variance off by a factor of 1 ± 0.0048" in text  # (3.4808 + 1.2816) / 1000 at level 0.001 / 2
+    assert "x<script>: covariance: no <variance> & more" in text
+    assert " ".join(text.split()).endswith(CAUTION)
+
+
+def test_text_of_the_other_outcomes():
+    assert verdict(z=(0.2,)).to_text().startswith("AGREES")
+    assert verdict(z=()).to_text().startswith("CANNOT BE JUDGED")
+
+
+@pytest.mark.parametrize(
+    ("p", "level", "expected"),
+    [(0.0, 5.0, "········│···"), (2.5, 5.0, "████····│···"), (5.0, 5.0, "████████│···"), (50.0, 5.0, "████████████")],
+)
+def test_bar(p, level, expected):
+    assert bar(-p * 2.302585092994046, level) == expected
+    assert bar(float("-inf"), level) == "█" * 12
+
+
+class Page(HTMLParser):
+    """Counts tags and checks that they are closed."""
+
+    VOID = frozenset({"meta"})
+
+    def __init__(self):
+        super().__init__()
+        self.open, self.seen, self.links = [], [], []
+
+    def handle_starttag(self, tag, attrs):
+        self.seen.append(tag)
+        self.links += [value for name, value in attrs if name in ("src", "href")]
+        if tag not in self.VOID:
+            self.open.append(tag)
+
+    def handle_endtag(self, tag):
+        assert self.open.pop() == tag
+
+
+def test_page_is_well_formed_self_contained_and_escaped(tmp_path):
+    file = verdict().to_html(tmp_path / "v.html")
+    text = file.read_text(encoding="utf-8")
+    page = Page()
+    page.feed(text)
+    assert page.open == []
+    assert page.links == []
+    assert "script" not in page.seen
+    assert "url(" not in text
+    assert "<b>Cold" not in text
+    assert "&lt;b&gt;Cold&lt;/b&gt; &amp; store" in text
+    assert "no &lt;variance&gt; &amp; more" in text
+    assert page.seen.count("tr") == 3 + 2  # rows, and the heads of two tables
+    assert "prefers-color-scheme: dark" in text
+
+
+def test_page_shows_departures_first():
+    text = verdict_page(verdict())
+    assert (
+        text.index('<tr class="departs">') < text.index('<tr class="agrees">') < text.index('<tr class="untestable">')
+    )
+    assert "scenarios of a stated model" in text
