@@ -226,7 +226,8 @@ class Graph:
     def _plan(self) -> None:
         """Decide which terms start jointly, and how far back everything must be drawn."""
         wanted = [*self._owners.values()]
-        filters = set(map(id, self.filters.values()))
+        # A filter that starts jointly reads no shocks before step 0; any other one, like a walk, does.
+        filters = {id(node) for node in self.filters.values() if _stationary(node) is not None}
         self._heads(wanted, passed=filters)
         for sources in self._together():
             self._start_together(sources)
@@ -245,7 +246,9 @@ class Graph:
             if noise is None:
                 continue
             node = self.filters.get(id(noise), noise)
-            past = node.term.stationary() if hasattr(node.term, "stationary") else None
+            past = _stationary(node)
+            if past is None:
+                node = noise
             if past is None and noise.head == 0:
                 continue
             gaussian = isinstance(noise.term, WhiteNoise) and source.law.gaussian
@@ -304,6 +307,11 @@ def _too_slow(node: Node, error: ValueError) -> str:
         f"{node.name} begins with a burn-in, because its shocks are not Gaussian, and {error}; give `before`, a "
         "normal law, or smaller coefficients"
     )
+
+
+def _stationary(node: Node) -> Any:
+    """The node's term as a member of a joint start, if it is a filter in its stationary law."""
+    return node.term.stationary() if hasattr(node.term, "stationary") else None
 
 
 def _is_noise(node: Any) -> bool:
