@@ -246,11 +246,11 @@ def _cross_one(
     probe: str,
 ) -> Iterator[Check]:
     moments = gather.moments
-    s1, s2 = math.sqrt(a.variance[i] + a.grain**2 / 12), math.sqrt(b.variance[j] + b.grain**2 / 12)
-    if not math.isfinite(s1 * s2 * known):
+    if not math.isfinite(known):
         return
     if pair.gaussian:
-        if moments.n >= 2:
+        s1, s2 = math.sqrt(a.variance[i] + a.grain**2 / 12), math.sqrt(b.variance[j] + b.grain**2 / 12)
+        if moments.n >= 2 and math.isfinite(s1 * s2):
             p, q = gather.plan.offset[pair.first] + i, gather.plan.offset[pair.second] + j
             finding: Finding = judge.covariance(moments.covariance(p, q), s1, s2, known / (s1 * s2), moments.n - 1)
             yield Check.of(name, "covariance between series", probe, "dependence", finding)
