@@ -6,7 +6,7 @@ from collections.abc import Iterable
 from textwrap import fill
 from typing import Any
 
-from procgen.chance.laws import LAWS
+from procgen.chance.laws import LAWS, Law
 from procgen.spec.declare import Parameter, Record, Records
 from procgen.spec.words import did_you_mean
 from procgen.terms import catalogue
@@ -33,7 +33,7 @@ def screen(width: int = 100) -> str:
         "laws of a shock",
         fill(", ".join(LAWS), width, initial_indent="  ", subsequent_indent="  "),
     ]
-    lines += ["", "procgen terms NAME says more, with an example that runs."]
+    lines += ["", "procgen terms NAME says more; of a term with an example that runs."]
     return "\n".join(lines[1:])
 
 
@@ -129,14 +129,18 @@ def _term_page(kind: str, width: int) -> str:
 
 
 def _law_page(name: str, width: int) -> str:
-    law: Any = LAWS[name]
-    purpose = (law.__doc__ or "").strip().split("\n\n")[0]
-    lines = [_hanging(f"{name}:", " ".join(purpose.split()), len(name) + 2, width), ""]
-    if law.parameters:
-        lines += ["parameters", *_parameters(law.parameters, width), ""]
+    law = LAWS[name]
     written = f"{{{name}: {{{', '.join(f'{p.name}: …' for p in law.parameters)}}}}}" if law.parameters else name
-    lines += [f"written as   law: {written}", "every law has mean 0 and variance 1 before it is scaled by sd"]
-    return "\n".join(lines)
+    lines = [_hanging(f"{name}:", purpose(law), len(name) + 2, width), ""]
+    lines += [_hanging("written as", f"law: {written}", 12, width), _hanging("source", law.source, 12, width)]
+    if law.parameters:
+        lines += ["", "parameters", *_parameters(law.parameters, width)]
+    return "\n".join([*lines, "", "every law has mean 0 and variance 1 before it is scaled by sd"])
+
+
+def purpose(law: type[Law]) -> str:
+    """The first paragraph of what a law says of itself."""
+    return " ".join((law.__doc__ or "").strip().split("\n\n")[0].split())
 
 
 def _parameters(parameters: Iterable[Parameter], width: int) -> list[str]:

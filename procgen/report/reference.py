@@ -14,7 +14,7 @@ from pathlib import Path
 from typing import Any
 
 from procgen.chance.laws import LAWS
-from procgen.report.catalogue import SHOCK, equation, example_spec, noises, rows
+from procgen.report.catalogue import SHOCK, equation, example_spec, noises, purpose, rows
 from procgen.spec.declare import Parameter
 from procgen.spec.entries import walk
 from procgen.spec.model import Series, Shared, Spec
@@ -62,8 +62,7 @@ def laws() -> str:
     """Every law with its parameters."""
     out = []
     for name, law in LAWS.items():
-        first = (law.__doc__ or "").strip().split("\n\n")[0]
-        out.append(f"- `{name}`: {' '.join(first.split())}")
+        out.append(f"- `{name}`: {purpose(law)} Source: {law.source}.")
         out += [f"  - `{p}` {s}: {d}; {rest}. {text}." for p, s, d, rest, text in rows(law.parameters)]
     return "\n".join(out)
 
