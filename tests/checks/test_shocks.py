@@ -58,16 +58,16 @@ def test_unknown_first_steps_and_broken_paths_are_left_out():
 
 @pytest.mark.parametrize(("law", "shape"), [(NORMAL, (60, 25)), (STUDENT, (100, 20))])
 def test_every_test_is_calibrated(law, shape):
-    # 300 draws: the count of p below 0.1 and 0.01 is binomial, held to the interval that leaves 1e-9 outside.
+    # 150 draws: the count of p below 0.1 and 0.01 is binomial, held to the interval that leaves 1e-9 outside.
     rng, found = np.random.default_rng(4), defaultdict(list)
-    for _ in range(300):
+    for _ in range(150):
         for name, check in checks_of(summed(law.distribution().rvs(size=shape, random_state=rng), law)).items():
             found[name].append(check.log_p)
     assert len(found) >= 20
     for name, log_ps in found.items():
         for level in (0.1, 0.01):
             count = np.count_nonzero(np.array(log_ps) <= math.log(level))
-            low, high = stats.binom.ppf(5e-10, 300, level), stats.binom.isf(5e-10, 300, level)
+            low, high = stats.binom.ppf(5e-10, 150, level), stats.binom.isf(5e-10, 150, level)
             assert low <= count <= high, (name, level, count)
 
 
