@@ -124,6 +124,7 @@ class Helper(threading.Thread):
             encoding="utf-8",
             env={**os.environ, "PYTHONPATH": os.pathsep.join(path or os.getcwd() for path in sys.path)},
             pass_fds=() if inherit is None else (inherit,),
+            process_group=0 if os.name == "posix" else None,  # Ctrl-C is for this process alone to act on
         )
         self.start()
 

@@ -12,48 +12,62 @@ from types import FrameType
 from typing import Any
 
 
+class Worker:
+    """Draws chains until standard input ends; when that is because the parent died, at once."""
+
+    def __init__(self) -> None:
+        self.answers, sys.stdout = sys.stdout, sys.stderr
+        self.answers.reconfigure(encoding="utf-8")  # type: ignore[union-attr]
+        self.tasks: SimpleQueue[str | None] = SimpleQueue()
+        self.busy = threading.Event()
+        self.stopped = False
+
+    def work(self) -> None:
+        threading.Thread(target=self._listen, daemon=True).start()
+        while (line := self.tasks.get()) is not None:
+            self._draw(line)
+            self.busy.clear()
+
+    def stop(self, number: int, frame: FrameType | None) -> None:
+        """Stop at the next tick, where a half-written part is removed: signals come at any instruction."""
+        if self.stopped or not self.busy.is_set():
+            os._exit(128 + number)
+        self.stopped = True
+
+    def _say(self, **message: Any) -> None:
+        self.answers.write(json.dumps(message) + "\n")
+        self.answers.flush()
+
+    def _tick(self, rows: int) -> None:
+        if self.stopped:
+            raise SystemExit(128 + signal.SIGTERM)
+        self._say(rows=rows)
+
+    def _draw(self, line: str) -> None:
+        from procgen.ensemble.errors import EnsembleError
+        from procgen.ensemble.part import Task, render_chain
+
+        try:
+            self._say(records=render_chain(Task.read(json.loads(line)), self._tick))
+        except EnsembleError as error:
+            self._say(error=str(error))
+        except MemoryError:
+            self._say(error="a worker process ran out of memory; use fewer --workers, then go on with --resume")
+
+    def _listen(self) -> None:
+        rest = b""
+        while data := os.read(0, 1 << 16):  # not sys.stdin, whose lock would hold up the end of the process
+            *lines, rest = (rest + data).split(b"\n")
+            for line in lines:
+                self.busy.set()
+                self.tasks.put(line.decode())
+        if self.busy.is_set():
+            os._exit(1)  # the parent is gone: nothing may be written any more
+        self.tasks.put(None)
+
+
 def main() -> None:
-    """Draw chains until standard input ends; a parent that has died ends it too, and this process at once."""
-    signal.signal(signal.SIGINT, signal.SIG_IGN)  # Ctrl-C reaches the whole group; the parent decides
-    signal.signal(signal.SIGTERM, _end)
-    answers, sys.stdout = sys.stdout, sys.stderr
-    answers.reconfigure(encoding="utf-8")  # type: ignore[union-attr]
-    tasks: SimpleQueue[str | None] = SimpleQueue()
-    busy = threading.Event()
-    threading.Thread(target=_listen, args=(tasks, busy), daemon=True).start()
-
-    def say(**message: Any) -> None:
-        answers.write(json.dumps(message) + "\n")
-        answers.flush()
-
-    while (line := tasks.get()) is not None:
-        _draw(line, say)
-        busy.clear()
-
-
-def _draw(line: str, say: Any) -> None:
-    from procgen.ensemble.errors import EnsembleError
-    from procgen.ensemble.part import Task, render_chain
-
-    try:
-        say(records=render_chain(Task.read(json.loads(line)), lambda rows: say(rows=rows)))
-    except EnsembleError as error:
-        say(error=str(error))
-    except MemoryError:
-        say(error="a worker process ran out of memory; use fewer --workers, then go on with --resume")
-
-
-def _listen(tasks: SimpleQueue[str | None], busy: threading.Event) -> None:
-    rest = b""
-    while data := os.read(0, 1 << 16):  # not sys.stdin, whose lock would hold up the end of the process
-        *lines, rest = (rest + data).split(b"\n")
-        for line in lines:
-            busy.set()
-            tasks.put(line.decode())
-    if busy.is_set():
-        os._exit(1)  # the parent is gone: nothing may be written any more
-    tasks.put(None)
-
-
-def _end(number: int, frame: FrameType | None) -> None:
-    raise SystemExit(143)
+    """Be a worker of the process that holds the other end of standard input and output."""
+    worker = Worker()
+    signal.signal(signal.SIGTERM, worker.stop)
+    worker.work()
