@@ -54,7 +54,7 @@ def test_ctrl_c_and_termination_leave_whole_parts_and_no_process(tmp_path, signu
     os.killpg(render.pid, signum)
     _, errors = render.communicate(timeout=10)
     assert render.returncode != 0
-    assert "worker" not in errors
+    assert "worker.py" not in errors
     assert "manifest.json" not in visible(tmp_path)
     if signum == signal.SIGINT:
         assert not list((tmp_path / ".state").glob("*.tmp"))
