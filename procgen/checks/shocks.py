@@ -23,13 +23,29 @@ class ShockLane:
     """What is carried from tile to tile for one range of paths."""
 
     scores: NDArray  # the last rows of the normal scores, (at most the longest lag, paths)
+    clusters: NDArray  # of the cluster scores, as many
     total: NDArray  # per path: sum of scores
     square: NDArray  # per path: sum of squared scores
     length: int = 0
 
     @classmethod
     def start(cls, paths: int) -> ShockLane:
-        return cls(np.zeros((0, paths)), np.zeros(paths), np.zeros(paths))
+        return cls(np.zeros((0, paths)), np.zeros((0, paths)), np.zeros(paths), np.zeros(paths))
+
+    def only(self, usable: NDArray) -> ShockLane:
+        """The lane of some of the paths."""
+        return ShockLane(
+            self.scores[:, usable], self.clusters[:, usable], self.total[usable], self.square[usable], self.length
+        )
+
+    def put_back(self, part: ShockLane, usable: NDArray) -> None:
+        """Take over what `only` gave; the other paths are broken, and are left out of the sums by path."""
+        for name in ("scores", "clusters"):
+            rows = np.full((len(getattr(part, name)), len(usable)), np.nan)
+            rows[:, usable] = getattr(part, name)
+            setattr(self, name, rows)
+        self.total[usable], self.square[usable], self.length = part.total, part.square, part.length
+        self.total[~usable] = np.nan
 
 
 @dataclass
@@ -78,12 +94,9 @@ class ShockSums:
         if usable.all():
             g[first:] = self._add(z[first:], first_step + first, lane)
             return g
-        part = ShockLane(lane.scores[:, usable], lane.total[usable], lane.square[usable], lane.length)
+        part = lane.only(usable)
         g[first:, usable] = self._add(z[first:][:, usable], first_step + first, part)
-        lane.total[usable], lane.square[usable], lane.length = part.total, part.square, part.length
-        lane.total[~usable] = np.nan  # what is broken once is left out of the sums by path
-        lane.scores = np.full((len(part.scores), z.shape[1]), np.nan)
-        lane.scores[:, usable] = part.scores
+        lane.put_back(part, usable)
         return g
 
     def _add(self, z: NDArray, first_step: int, lane: ShockLane) -> NDArray:
@@ -97,26 +110,25 @@ class ShockSums:
         self.n += z.size
         self.sums += z.sum(), np.einsum("tp,tp->", z, z)
         self.counts += bin_counts(u)
-        self._along(g, lane)
+        self._along(g, cluster_scores(u), lane)
         self._across(g, first_step)
         lane.total += g.sum(axis=0)
         lane.square += np.einsum("tp,tp->p", g, g)
         lane.length += len(g)
         return g
 
-    def _along(self, g: NDArray, lane: ShockLane) -> None:
+    def _along(self, g: NDArray, clusters: NDArray, lane: ShockLane) -> None:
         """Products with earlier steps of the same path."""
-        from scipy.special import ndtr
-
         past = len(lane.scores)
         rows = np.concatenate([lane.scores, g]) if past else g
-        clusters = cluster_scores(ndtr(rows))
+        clusters = np.concatenate([lane.clusters, clusters]) if past else clusters
         for i, lag in enumerate(self.lags):
             self.memory[:, i] += _products(rows, rows, lag, past)
         for i, lag in enumerate(CLUSTER_LAGS):
             self.cluster[:, i] += _products(clusters, clusters, lag, past)
         self.asymmetry += _products(clusters, rows, 1, past)
-        lane.scores = rows[max(0, len(rows) - max(self.lags)) :].copy()
+        keep = max(0, len(rows) - max(self.lags))
+        lane.scores, lane.clusters = rows[keep:].copy(), clusters[keep:].copy()
 
     def _across(self, g: NDArray, first_step: int) -> None:
         """Profile by step, and products with the neighbouring path."""
