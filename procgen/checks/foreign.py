@@ -97,11 +97,13 @@ class Table:
     """A table put in order: dense arrays, NaN where something is missing, and checks that name it."""
 
     def __init__(self, frame: pd.DataFrame, names: Names, spec: Any, where: str):
-        self.spec, self.where, self.faults = spec, where, []
+        self.spec, self.where = spec, where
+        self.faults: list[Check] = []
         if not len(frame):
             raise TableError(f"{where} has no rows")
         self._checks: list[Check] = []
-        path, self.labels = _codes(frame[names.path]) if names.path else (np.zeros(len(frame), np.int64), ["0"])
+        path, labels = _codes(frame[names.path]) if names.path else (np.zeros(len(frame), np.int64), ["0"])
+        self.labels: list[Any] = labels
         step = self._steps(frame, names, path)
         self.paths, self.steps = len(self.labels), int(step.max()) + 1
         if self.paths * self.steps > 4 * len(frame) + 1_000_000:

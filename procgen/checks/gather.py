@@ -54,7 +54,7 @@ class Lane:
     def __init__(self, plan: Plan, first_path: int, paths: int):
         self.first_path, self.paths, self.step = first_path, paths, 0
         self.probes = np.full((paths, plan.offset[-1]), np.nan)
-        self.pools = [np.zeros((paths, 1 + len(p.pool.lags))) if p.pool else None for p in plan.series]
+        self.pools = [np.zeros((paths, 1 + len(p.pool.lags) if p.pool else 0)) for p in plan.series]
         self.tails: list[NDArray | None] = [None] * len(plan.series)
         self.prints = np.zeros((len(plan.series), paths), dtype=np.uint64)
         self.carriers: dict[str, Any] = {}
@@ -82,10 +82,11 @@ class Gather:
         self.kept = Kept(len(plan.kept))
         self.gaps: dict[str, float] = {}  # series without chance -> largest distance from theory
         self.noise: dict[str, float] = {}  # series -> variance that rounding adds to a recovered shock
+        self.routes = {name: way for name, way in plan.routes.items() if isinstance(way, Route)}
         self.shocks = {
-            name: ShockSums(route.scores, plan.steps, _lags(series))
-            for series, (name, route) in zip(plan.series, plan.routes.items(), strict=True)
-            if isinstance(route, Route)
+            series.name: ShockSums(self.routes[series.name].scores, plan.steps, _lags(series))
+            for series in plan.series
+            if series.name in self.routes
         }
         self.cross = {pair: CrossSums() for pair in plan.shock_pairs}
 
@@ -166,7 +167,7 @@ class Gather:
             self.gaps[plan.name] = max(self.gaps.get(plan.name, 0.0), float(gap))
 
     def _recover(self, lane: Lane, name: str, x: NDArray) -> NDArray:
-        route = self.plan.routes[name]
+        route = self.routes[name]
         if name not in lane.shocks:
             lane.carriers[name] = route.start(lane.paths)
             lane.shocks[name] = ShockLane.start(lane.paths)
@@ -198,7 +199,7 @@ class Gather:
             places = [plan.offset[column] + i for column, i in plan.kept]
             self.kept.absorb(lane.first_path, lane.probes[:, places])
         for powers, sums, series in zip(self.pooled, lane.pools, plan.series, strict=True):
-            if powers is not None:
+            if powers is not None and series.pool is not None:
                 width = series.pool.last - series.pool.first
                 powers.absorb(sums / np.array([width] + [width - lag for lag in series.pool.lags]))
         for name, shock_lane in lane.shocks.items():
@@ -215,16 +216,16 @@ class Gather:
         self.unfinished += other.unfinished
         for name in ("structure", "moments", "deviations", "products", "crossed", "kept"):
             getattr(self, name).merge(getattr(other, name))
-        for mine, theirs in zip(self.pooled, other.pooled, strict=True):
-            if mine is not None:
-                mine.merge(theirs)
-        for mine, theirs in ((self.gaps, other.gaps), (self.noise, other.noise)):
-            for name, value in theirs.items():
-                mine[name] = max(mine.get(name, 0.0), value)
-        for name, sums in self.shocks.items():
-            sums.merge(other.shocks[name])
-        for pair, sums in self.cross.items():
-            sums.merge(other.cross[pair])
+        for ours, theirs in zip(self.pooled, other.pooled, strict=True):
+            if ours is not None and theirs is not None:
+                ours.merge(theirs)
+        for largest, others in ((self.gaps, other.gaps), (self.noise, other.noise)):
+            for name, value in others.items():
+                largest[name] = max(largest.get(name, 0.0), value)
+        for name, shocks in self.shocks.items():
+            shocks.merge(other.shocks[name])
+        for pair, products in self.cross.items():
+            products.merge(other.cross[pair])
 
 
 def _lags(plan: SeriesPlan) -> tuple[int, ...]:
@@ -233,7 +234,7 @@ def _lags(plan: SeriesPlan) -> tuple[int, ...]:
 
 
 def _means(plan: Plan) -> NDArray:
-    return np.concatenate([np.zeros(len(p.steps)) if p.mean is None else p.mean for p in plan.series])
+    return np.concatenate([np.nan_to_num(p.mean) for p in plan.series])
 
 
 def _products(plan: Plan, rows: NDArray) -> NDArray:
@@ -241,14 +242,10 @@ def _products(plan: Plan, rows: NDArray) -> NDArray:
     out = np.full((len(rows), len(plan.products)), np.nan)
     for k, (column, i, j) in enumerate(plan.products):
         series, at = plan.series[column], plan.offset[column]
-        known = series.covariance.get((i, j)) if i != j else _entry(series.variance, i)
-        if series.mean is not None and known is not None and np.isfinite(known):
+        known = series.covariance.get((i, j)) if i != j else float(series.variance[i])
+        if not series.unknown and known is not None and np.isfinite(known):
             out[:, k] = rows[:, at + i] * rows[:, at + j] - known
     return out
-
-
-def _entry(values: NDArray | None, i: int) -> float | None:
-    return None if values is None else float(values[i])
 
 
 def _cross_products(plan: Plan, rows: NDArray) -> NDArray:

@@ -20,9 +20,8 @@ _QUANTILES = (0.01, 0.99)
 def moment_checks(gather: Gather, column: int) -> Iterator[Check]:
     """Every check of one series that needs only values, not shocks."""
     plan = gather.plan.series[column]
-    if plan.mean is None or plan.variance is None:
-        missing = "mean" if plan.mean is None else "variance"
-        yield Check(plan.name, "moments", "", "level", outcome="untestable", note=plan.reason(missing))
+    if plan.unknown:
+        yield Check(plan.name, "moments", "", "level", outcome="untestable", note=plan.unknown)
         return
     for i in range(len(plan.steps)):
         if plan.constant[i]:
@@ -88,7 +87,7 @@ def _mean_and_variance(gather: Gather, column: int, i: int) -> Iterator[Check]:
 
 def _sample(powers: Powers, k: int) -> Sample:
     n = int(powers.n[k])
-    return Sample.from_powers(n, powers.sums[:, k]) if n else Sample(0, math.nan, 0.0, 0.0, 0.0)
+    return Sample.from_powers(n, powers.sums[:, k].tolist()) if n else Sample(0, math.nan, 0.0, 0.0, 0.0)
 
 
 def _limit(
@@ -179,9 +178,9 @@ def _laws(gather: Gather, column: int) -> Iterator[Check]:
 
 def _pooled(gather: Gather, column: int) -> Iterator[Check]:
     plan, powers = gather.plan.series[column], gather.pooled[column]
-    if powers is None:
-        return
     pool = plan.pool
+    if powers is None or pool is None:
+        return
     for k, what in enumerate(pool.statistics()):
         lag = 0 if k == 0 else pool.lags[k - 1]
         kind = ("level", "spread", "memory")[min(k, 2)]
@@ -223,14 +222,15 @@ def cross_moments(gather: Gather, place: int) -> Iterator[Check]:
     a, b = (gather.plan.series[k] for k in (pair.first, pair.second))
     start = sum(len(p.places) for p in gather.plan.cross[:place])
     name = f"{a.name} ~ {b.name}"
-    if any(value is None for value in pair.covariance):
+    stated = [value for value in pair.covariance if value is not None]
+    if len(stated) < len(pair.covariance):
         yield Check(name, "covariance between series", "", "dependence", outcome="untestable", note=pair.reason)
         return
     for k, (i, j) in enumerate(pair.places):
         if a.constant[i] or b.constant[j]:
             continue
         probe = f"steps {a.steps[i]}, {b.steps[j]}"
-        yield from _cross_one(gather, pair, a, b, i, j, float(pair.covariance[k]), start + k, name, probe)
+        yield from _cross_one(gather, pair, a, b, i, j, stated[k], start + k, name, probe)
 
 
 def _cross_one(

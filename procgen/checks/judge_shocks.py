@@ -51,9 +51,8 @@ def _level_and_spread(series: str, sums: ShockSums, source: str) -> Iterator[Che
         )
     else:
         yield Check.of(series, "shocks: level score", "all steps", "level", judge.unit(components[0], 1 / root), source)
-    moments = [law.moment(k) for k in (2, 3, 4, 6)] if no_big_jump(law, n, 2) else [None]
-    if all(m is not None for m in moments):
-        _, _, m4, m6 = moments
+    m4, m6 = (law.moment(4), law.moment(6)) if no_big_jump(law, n, 2) else (None, None)
+    if m4 is not None and m6 is not None:
         # (z - mean)² − 1 has third moment m6 − 3 m4 + 2 up to terms in the mean, which is 0.
         sd = math.sqrt(m4 - 1)
         skew = (m6 - 3 * m4 + 2) / sd**3 / root

@@ -37,15 +37,19 @@ def probe_pairs(steps: Sequence[int]) -> tuple[tuple[int, int], ...]:
 
 @dataclass
 class SeriesPlan:
-    """One series: its probes, their theory, the window of pooled statistics, and the marginal laws."""
+    """One series: its probes, their theory, the window of pooled statistics, and the marginal laws.
+
+    `mean` and `variance` are NaN where theory does not know them; `unknown` then says why.
+    """
 
     name: str
     steps: NDArray[np.int64]
     theory: Any
+    mean: NDArray
+    variance: NDArray
     grain: float = 0.0  # the distance of neighbouring values as stored; 0 when it does not matter
+    unknown: str = ""
     pairs: tuple[tuple[int, int], ...] = ()
-    mean: NDArray | None = None
-    variance: NDArray | None = None
     covariance: dict[tuple[int, int], float | None] = field(default_factory=dict)
     gaussian: bool = False
     highest: float = 0.0
@@ -60,8 +64,6 @@ class SeriesPlan:
     @property
     def constant(self) -> NDArray[np.bool_]:
         """Probes at which theory leaves nothing to chance."""
-        if self.variance is None:
-            return np.zeros(len(self.steps), dtype=bool)
         return self.variance <= 0.0
 
 
@@ -112,15 +114,26 @@ class Marginal:
 def plan_series(name: str, theory: Any, steps: int, grain: float, periods: Sequence[int]) -> SeriesPlan:
     """The plan of one series from its theory."""
     at = np.array(probe_steps(steps), dtype=np.int64)
-    plan = SeriesPlan(name, at, theory, grain, probe_pairs(at))
-    plan.mean, plan.variance = theory.mean(at), theory.variance(at)
+    mean, variance = theory.mean(at), theory.variance(at)
+    unknown = [theory.reason(what) or "not known" for what, x in (("mean", mean), ("variance", variance)) if x is None]
+    blank = np.full(len(at), np.nan)
+    plan = SeriesPlan(
+        name,
+        at,
+        theory,
+        blank if mean is None else mean,
+        blank if variance is None else variance,
+        grain,
+        "; ".join(unknown),
+        probe_pairs(at.tolist()),
+    )
     plan.highest = float(theory.highest_moment or 0.0)
     plan.gaussian = bool(theory.gaussian)
     plan.period = next((p for p in periods if 1 < p < steps), None)
     for i, j in plan.pairs:
         value = theory.covariance(at[i : i + 1], at[j : j + 1])
         plan.covariance[i, j] = None if value is None else float(np.ravel(value)[0])
-    if plan.mean is not None and plan.variance is not None:
+    if not plan.unknown:
         _marginals(plan)
         if not plan.gaussian:
             plan.product_sd = {(i, j): _product_sd(plan, i, j) for i, j in [*_diagonal(len(at)), *plan.pairs]}
@@ -130,7 +143,6 @@ def plan_series(name: str, theory: Any, steps: int, grain: float, periods: Seque
 
 def _marginals(plan: SeriesPlan) -> None:
     """Known laws at three of the probes."""
-    assert plan.mean is not None and plan.variance is not None
     moving = np.flatnonzero(~plan.constant)
     chosen = sorted({moving[0], moving[len(moving) // 2], moving[-1]}) if len(moving) else []
     for i in map(int, chosen):

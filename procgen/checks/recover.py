@@ -91,6 +91,7 @@ def dither(first_path: int, paths: int, first_step: int, steps: int) -> NDArray:
 
 def route(name: str, theory: Any, graph: Any, grain: float) -> Route | Cannot:
     """The best way to the shocks of a series, or why there is none."""
+    from procgen.terms.base import Unknown
     from procgen.terms.recover import recovery
 
     system = theory.system() if theory.gaussian else None
@@ -100,8 +101,8 @@ def route(name: str, theory: Any, graph: Any, grain: float) -> Route | Cannot:
     undone = recovery(graph, name, 1)
     if size <= (LARGEST_STATE if not undone else SMALL_STATE):
         return _by_filter(name, theory, graph, grain, system)
-    if not undone:
-        return Cannot(getattr(undone, "reason", "it cannot be undone"))
+    if isinstance(undone, Unknown):
+        return Cannot(undone.reason)
     words = f"recovered by undoing {name} down to {undone.source.name}"
     return Route(name, Scores(undone.source.law), words, theory, graph, grain, source=undone.source)
 

@@ -138,8 +138,8 @@ def judged(gather: Gather) -> Iterator[Check]:
 
 def _known(gather: Gather, series: SeriesPlan) -> Check:
     """A series without chance must be its mean."""
-    if series.mean is None:
-        return Check(series.name, "values", "all steps", "level", outcome="untestable", note=series.reason("mean"))
+    if series.unknown:
+        return Check(series.name, "values", "all steps", "level", outcome="untestable", note=series.unknown)
     gap = gather.gaps.get(series.name, 0.0)
     scale = float(np.max(np.abs(series.mean)))
     room = series.grain / 2 + 1e-9 * max(scale, 1e-300)
@@ -167,7 +167,7 @@ def _shocks(gather: Gather, name: str) -> Iterator[Check]:
 
 def _chance_of_equal(series: SeriesPlan, plan: Plan) -> float:
     """Probability that two paths of a series are equal by rounding; 0 where values are not rounded."""
-    if series.variance is None or not np.isfinite(series.variance).all():
+    if not np.isfinite(series.variance).all():
         return 0.0
     moving = int(np.count_nonzero(series.variance > 0))
     if series.grain == 0.0:

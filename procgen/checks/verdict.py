@@ -59,10 +59,10 @@ class Check:
         )  # fmt: skip
 
     @classmethod
-    def fact(cls, series: str, what: str, probe: str, fault: str, note: str = "", **numbers: float) -> Check:
+    def fact(cls, series: str, what: str, probe: str, fault: str, note: str = "") -> Check:
         """A fact that holds or not, without chance: `fault` is empty when it holds."""
         outcome = "departs" if fault else "agrees"
-        return cls(series, what, probe, "structure", outcome=outcome, note=fault or note, **numbers)
+        return cls(series, what, probe, "structure", outcome=outcome, note=fault or note)
 
     @property
     def p(self) -> float | None:
@@ -180,7 +180,7 @@ def _judge(rows: list[Check], false_alarm: float) -> None:
                 row.outcome, row.note, row.log_p = "untestable", _join(reason, row.note), None
         judged = [row for row in judged if not row.outcome]
     level = false_alarm / max(1, len(judged))
-    adjusted = holm([row.p for row in judged])
+    adjusted = holm([math.exp(row.log_p or 0.0) for row in judged])
     for row, p in zip(judged, adjusted, strict=True):
         row.outcome = "departs" if p <= false_alarm else "agrees"
         row.detectable = row.finding.detect(level) if row.finding else None

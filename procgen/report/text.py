@@ -71,8 +71,8 @@ def _worst(rows: Sequence[Check], verdict: Verdict) -> list[str]:
     head = ("", "series", "check", "at", "theory", "estimate", "p")
     cells = [
         (
-            bar(row.log_p, level), row.series, row.what, row.probe, number(row.theory), number(row.estimate),
-            p_text(row.log_p),
+            bar(row.log_p or 0.0, level), row.series, row.what, row.probe, number(row.theory), number(row.estimate),
+            p_text(row.log_p or 0.0),
         )
         for row in rows
     ]  # fmt: skip
