@@ -4,7 +4,8 @@
 
 Every case is a whole process, from its start until its files are complete. Rounds are interleaved, so that a
 slow minute of the machine meets every case; the table gives medians. Memory is the peak resident size of the
-largest process of a case (wait4 counts a process together with the children it has waited for).
+largest process of a case, and processor time that of all of them (wait4 counts a process together with the
+children it has waited for).
 
 Cases: `walk`, `ar2`, `garch` are `procgen render` with two workers. `by hand` draws with NumPy, sums, builds a
 pandas frame with path and step and writes it with to_parquet. `floor` is what cannot be beaten without
@@ -23,6 +24,7 @@ import subprocess
 import sys
 import time
 from pathlib import Path
+from typing import NamedTuple
 
 SPEC = """\
 procgen: 1
@@ -88,7 +90,7 @@ def main() -> None:
     paths, steps, rounds = (4096, 200, 1) if args.quick else (65_536, 1_000, args.rounds)
     args.dir.mkdir(parents=True, exist_ok=True)
     cases = prepare(args.dir, paths, steps)
-    seen: dict[str, list[tuple[float, float]]] = {name: [] for name in cases}
+    seen: dict[str, list[Run]] = {name: [] for name in cases}
     for _ in range(rounds):
         for name, command in cases.items():
             seen[name].append(measure(command, args.dir / "out"))
@@ -118,8 +120,16 @@ def prepare(folder: Path, paths: int, steps: int) -> dict[str, list[str]]:
     return cases
 
 
-def measure(command: list[str], out: Path) -> tuple[float, float]:
-    """Seconds, and peak memory in MB, of one case."""
+class Run(NamedTuple):
+    """One case, once."""
+
+    seconds: float
+    processor: float  # seconds, of all processes
+    peak: float  # MB, of the largest process
+
+
+def measure(command: list[str], out: Path) -> Run:
+    """Run one case."""
     shutil.rmtree(out, ignore_errors=True)
     out.mkdir()
     began = time.perf_counter()
@@ -131,21 +141,25 @@ def measure(command: list[str], out: Path) -> tuple[float, float]:
         raise SystemExit(f"{' '.join(command)} ended with exit code {process.returncode}")
     shutil.rmtree(out)
     unit = 1 if platform.system() == "Darwin" else 1024
-    return took, usage.ru_maxrss * unit / 1e6
+    return Run(took, usage.ru_utime + usage.ru_stime, usage.ru_maxrss * unit / 1e6)
 
 
-def report(seen: dict[str, list[tuple[float, float]]], paths: int, steps: int, rounds: int) -> None:
-    middle = {name: statistics.median(t for t, _ in runs) for name, runs in seen.items()}
+def report(seen: dict[str, list[Run]], paths: int, steps: int, rounds: int) -> None:
     print(f"{paths:,} × {steps:,}, median of {rounds}, {os.cpu_count()} processors, Python {platform.python_version()}")
     print(f"extra speed (numba) {'present' if importlib.util.find_spec('numba') else 'absent'}\n")
-    print(f"{'case':9}{'seconds':>9}{'range':>16}{'ns a value':>12}{'peak MB':>9}{'to walk':>9}{'to hand':>9}")
+    print(f"{'case':9}{'seconds':>9}{'range':>16}{'processor s':>13}{'peak MB':>9}{'to walk':>9}{'to hand':>9}")
     for name, runs in seen.items():
-        times = [t for t, _ in runs]
+        times = [run.seconds for run in runs]
         print(
-            f"{name:9}{middle[name]:9.2f}{f'{min(times):.2f} to {max(times):.2f}':>16}"
-            f"{middle[name] / paths / steps * 1e9:12.1f}{max(m for _, m in runs):9.0f}"
-            f"{middle[name] / middle['walk']:9.2f}{middle[name] / middle['by hand']:9.2f}"
+            f"{name:9}{statistics.median(times):9.2f}{f'{min(times):.2f} to {max(times):.2f}':>16}"
+            f"{statistics.median(run.processor for run in runs):13.2f}{max(run.peak for run in runs):9.0f}"
+            f"{ratio(runs, seen['walk']):9.2f}{ratio(runs, seen['by hand']):9.2f}"
         )
+
+
+def ratio(runs: list[Run], others: list[Run]) -> float:
+    """Median of the ratios of times, round by round."""
+    return statistics.median(a.seconds / b.seconds for a, b in zip(runs, others, strict=True))
 
 
 if __name__ == "__main__":
