@@ -7,7 +7,8 @@ import numpy as np
 from procgen.theory.arma import cross_covariance
 from procgen.theory.linear import At, Base, Linear, Sum, base_of
 from procgen.theory.sources import Space
-from procgen.theory.system import system_of
+from procgen.theory.system import LARGEST_STATE, state_size, system_of
+from procgen.theory.weights import covariance_by_weights
 
 
 def covariance(space: Space, x: Linear, y: Linear, t: np.ndarray, s: np.ndarray) -> np.ndarray:
@@ -25,10 +26,16 @@ def covariance(space: Space, x: Linear, y: Linear, t: np.ndarray, s: np.ndarray)
         if left.is_plain and right.is_plain:
             total += _plain(space, left, right, t, s)
         else:
-            system = system_of(space, (left,) if left == right else (left, right))
-            flat = system.covariance(0, len(system.observation) - 1, t.ravel(), s.ravel())
-            total += flat.reshape(t.shape)
+            total += _joint(space, left, right, t, s)
     return total
+
+
+def _joint(space: Space, x: Linear, y: Linear, t: np.ndarray, s: np.ndarray) -> np.ndarray:
+    forms = (x,) if x == y else (x, y)
+    if state_size(forms) > LARGEST_STATE:
+        return covariance_by_weights(space, x, y, t, s)
+    flat = system_of(space, forms).covariance(0, len(forms) - 1, t.ravel(), s.ravel())
+    return flat.reshape(t.shape)
 
 
 def condition(form: Linear) -> float:

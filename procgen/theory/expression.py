@@ -9,54 +9,20 @@ opaque source, whose moments are unknown for a reason, but whose stationarity is
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Mapping, Sequence
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 from itertools import count
 
 import numpy as np
 
-from procgen.theory import known, wick
+from procgen.theory import known, monomials
 from procgen.theory.known import Known
 from procgen.theory.linear import At, Base, Linear, Sum
+from procgen.theory.monomials import Term, in_order
 from procgen.theory.sources import OPAQUE, Source, Space
 from procgen.theory.unknown import Unknown
 
 MOST_TERMS = 512
-LARGEST_TABLE = 2048  # running sums of non-linear terms are added up exactly, to this step
 _serial = count()
-
-
-@dataclass(frozen=True)
-class Term:
-    """Known factors times linear forms times exp(exponent); or known factors times a running sum of a term."""
-
-    knowns: tuple[Known, ...] = ()
-    factors: tuple[Linear, ...] = ()
-    exponent: Linear = field(default_factory=Linear)
-    summed: Term | None = None
-
-    @property
-    def sources(self) -> dict[Source, None]:
-        inner = self.summed.sources if self.summed else {}
-        for form in (*self.factors, self.exponent):
-            inner = inner | form.sources
-        return inner
-
-    def coefficient(self, steps: np.ndarray) -> np.ndarray:
-        value = np.ones(np.shape(steps))
-        for factor in self.knowns:
-            value = value * factor(steps)
-        return value
-
-    def lag(self, by: int) -> Iterable[tuple[Term, float]]:
-        """This term `by` steps ago, as a sum of terms: a running sum gives back what it has summed since."""
-        knowns = tuple(k.lag(by) for k in self.knowns)
-        if self.summed is None:
-            yield Term(knowns, tuple(f.lag(by) for f in self.factors), self.exponent.lag(by)), 1.0
-            return
-        yield Term(knowns, summed=self.summed), 1.0
-        for j in range(by):
-            for inner, c in self.summed.lag(j):
-                yield replace(inner, knowns=_sorted(knowns + inner.knowns)), -c
 
 
 @dataclass(frozen=True)
@@ -145,7 +111,7 @@ class Expression:
                 raise Unknown(source.reason)
         total = self.mean_path(steps)
         for term, c in self.terms.items():
-            total = total + c * _mean(self.space, term, steps)
+            total = total + c * monomials.mean(self.space, term, steps)
         return total
 
     def covariance(self, other: Expression, t: np.ndarray, s: np.ndarray) -> np.ndarray:
@@ -153,7 +119,7 @@ class Expression:
         total = np.zeros(t.shape)
         for m, c in self.parts:
             for n, k in other.parts:
-                total = total + (c * k) * _covariance(self.space, m, n, t, s)
+                total = total + (c * k) * monomials.covariance(self.space, m, n, t, s)
         return total
 
     @property
@@ -195,7 +161,7 @@ def opaque(space: Space, ingredients: Sequence[Expression], reason: str, mean: K
 
 
 def _times(a: Term, b: Term) -> Term:
-    knowns = _sorted(a.knowns + b.knowns)
+    knowns = in_order(a.knowns + b.knowns)
     if a.summed or b.summed:
         one, other = (a, b) if a.summed else (b, a)
         if other.summed or other.factors or other.exponent:
@@ -225,50 +191,3 @@ def _collect(parts: Iterable[tuple[Term, float]]) -> dict[Term, float]:
     for term, c in parts:
         total[term] = total.get(term, 0.0) + c
     return {term: c for term, c in total.items() if c}
-
-
-def _sorted(knowns: tuple[Known, ...]) -> tuple[Known, ...]:
-    return tuple(sorted(knowns, key=lambda k: repr(k.key)))
-
-
-# moments of terms
-
-
-def _mean(space: Space, term: Term, steps: np.ndarray) -> np.ndarray:
-    if term.summed is None:
-        return term.coefficient(steps) * wick.mean(space, term.factors, term.exponent, steps)
-    top = _table_size(steps)
-    inner = _mean(space, term.summed, np.arange(top, dtype=np.int64))
-    inner[0] = 0.0
-    return term.coefficient(steps) * np.cumsum(inner)[steps]
-
-
-def _covariance(space: Space, m: Term, n: Term, t: np.ndarray, s: np.ndarray) -> np.ndarray:
-    if not any(space.dependent(a, b) for a in m.sources for b in n.sources):
-        return np.zeros(t.shape)
-    known_part = m.coefficient(t) * n.coefficient(s)
-    if m.summed is None and n.summed is None:
-        return known_part * wick.joint(space, (m.factors, m.exponent), (n.factors, n.exponent), t, s)[1]
-    return known_part * _table(space, m, n, _table_size(t), _table_size(s))[t, s]
-
-
-def _table(space: Space, m: Term, n: Term, rows: int, columns: int) -> np.ndarray:
-    """Covariances of two terms without their known factors at all pairs of steps, running sums added up."""
-    for axis, term in ((0, m), (1, n)):
-        if term.summed is not None:
-            a, b = (term.summed, n) if axis == 0 else (m, term.summed)
-            t, s = np.arange(rows), np.arange(columns)
-            inner = _table(space, a, b, rows, columns)
-            inner = inner * (a.coefficient(t)[:, None] if axis == 0 else b.coefficient(s)[None, :])
-            inner[(0, slice(None)) if axis == 0 else (slice(None), 0)] = 0.0
-            return np.cumsum(inner, axis=axis)
-    grid = np.meshgrid(np.arange(rows), np.arange(columns), indexing="ij")
-    return wick.joint(space, (m.factors, m.exponent), (n.factors, n.exponent), *grid)[1]
-
-
-def _table_size(steps: np.ndarray) -> int:
-    if np.min(steps, initial=0) < 0:
-        raise Unknown("a running sum of products is added up from step 0 on only")
-    if np.max(steps, initial=0) >= LARGEST_TABLE:
-        raise Unknown(f"a running sum of products is added up exactly, which is done before step {LARGEST_TABLE}")
-    return int(np.max(steps, initial=0)) + 1

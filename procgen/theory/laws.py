@@ -7,8 +7,9 @@ from typing import Any
 import numpy as np
 
 from procgen.theory.covariance import covariance
-from procgen.theory.expression import Expression, Term
+from procgen.theory.expression import Expression
 from procgen.theory.linear import At
+from procgen.theory.monomials import Term
 from procgen.theory.sources import GARCH, IID, OPAQUE, SQUARES, Source, Space
 from procgen.theory.unknown import Unknown
 

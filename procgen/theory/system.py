@@ -150,6 +150,11 @@ def _distinct(values: np.ndarray) -> Distinct:
     return np.flatnonzero(present), (np.cumsum(present) - 1)[values]
 
 
+def state_size(forms: Sequence[Linear]) -> int:
+    """Number of elements of the joint state of some forms."""
+    return _Layout(forms).size
+
+
 def system_of(space: Space, forms: Sequence[Linear]) -> System:
     """The joint state space of linear forms, one row of the observation each.
 
@@ -158,7 +163,7 @@ def system_of(space: Space, forms: Sequence[Linear]) -> System:
     layout = _Layout(forms)
     n = layout.size
     if n > LARGEST_STATE:
-        raise Unknown(f"its state has {n} elements, and covariances of such series are computed up to {LARGEST_STATE}")
+        raise Unknown(f"its state has {n} elements, more than {LARGEST_STATE}")
     sources = list(dict.fromkeys(base.source for base in layout.depth))
     noise = np.array([[space.covariance(a, b) for b in sources] for a in sources])
     transition, loading = np.zeros((n, n)), np.zeros((n, len(sources)))

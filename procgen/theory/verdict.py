@@ -17,9 +17,10 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from procgen.theory.arma import spectral_radius
-from procgen.theory.expression import Expression, Term
+from procgen.theory.expression import Expression
 from procgen.theory.known import Known
 from procgen.theory.linear import At, Frozen, Key, Linear, Sum, base_of
+from procgen.theory.monomials import Term
 from procgen.theory.sources import GARCH, OPAQUE, SQUARES, Source, Space
 
 INFINITE = "infinite variance"

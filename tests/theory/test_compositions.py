@@ -110,6 +110,23 @@ def test_far_steps_of_an_integrated_ar():
         assert y.variance(n) == pytest.approx(exact, rel=1e-9)
 
 
+def test_far_lag_of_a_walk():
+    """Beyond the largest state: Cov(w(t - k), w(s - k)) of a two-sided walk is that of the distances from step 0."""
+    w = World()
+    walk = w.axis.walk(w.noise["b.noise"], 0.0, 0.0)
+    y = SeriesTheory("y", walk.lag(2000))
+    np.testing.assert_allclose(
+        y.covariance([0, 500, 2500, 1000], [0, 100, 2200, 2500]), 4.0 * np.array([2000, 1500, 200, 0])
+    )
+    cross = CrossTheory(y, SeriesTheory("w", walk))
+    np.testing.assert_allclose(cross.covariance([2500, 100], [300, 300]), [4.0 * 300, 0.0])
+    ar, phi = w.axis.filtered(w.noise["a.noise"], (0.6,)), 0.6
+    mixed = SeriesTheory("m", ar.integrate(0.0).lag(1800))  # Brockwell & Davis (1991), theorem 7.1.1
+    n = np.array([1800, 1700, 5])
+    exact = (n + 2 * (n * phi / (1 - phi) - phi * (1 - phi**n) / (1 - phi) ** 2)) / (1 - phi**2)
+    np.testing.assert_allclose(mixed.variance([0, 100, 1805]), exact, rtol=1e-10)
+
+
 @pytest.mark.parametrize(
     ("phi", "theta", "x", "shocks"),
     [

@@ -143,7 +143,27 @@ def test_running_sum_of_an_exponential(axis):
     np.testing.assert_allclose(y.mean([0, 1, 10]), 3.0 + np.exp(g / 2) * np.array([0, 1, 10]), rtol=1e-14)
     back = SeriesTheory("x", x.integrate(3.0).difference())
     np.testing.assert_allclose(back.autocovariance(LAGS), each[:6], rtol=1e-12)
-    assert y.variance(5000) is None and "2048" in y.reason("variance")
+    assert y.variance(10**7) is None and "1048576" in y.reason("variance")
+
+
+def test_running_sum_at_far_steps_and_against_what_it_sums(axis):
+    """Sums over lags against sums over all pairs, and one-sided sums; a moving factor is summed over all pairs."""
+    x = axis.filtered(axis.source("x.ar", NORMAL, 0.4), (0.9,)).exp()
+    y = x.integrate(0.0)
+    g = 0.16 / 0.19
+    each = np.exp(g) * np.expm1(g * 0.9 ** np.arange(3001))
+    far = 3000 * each[0] + 2 * ((3000 - np.arange(1, 3000)) * each[1:3000]).sum()
+    assert SeriesTheory("y", y).variance(3000) == pytest.approx(far, rel=1e-11)
+    cross = CrossTheory(SeriesTheory("y", y), SeriesTheory("x", x))
+    assert cross.covariance(5, 9) == pytest.approx(sum(each[abs(k - 9)] for k in range(1, 6)), rel=1e-11)
+    other = CrossTheory(cross.second, cross.first)
+    assert other.covariance(2, 7) == pytest.approx(sum(each[abs(2 - k)] for k in range(1, 8)), rel=1e-11)
+    assert other.covariance(2, 0) == 0.0
+    ramp = axis.known(lambda steps: 1.0 + steps)
+    z = SeriesTheory("z", axis.product((ramp, x)).integrate(0.0))
+    exact = sum((1 + i) * (1 + j) * each[abs(i - j)] for i in range(1, 8) for j in range(1, 6))
+    assert z.covariance(7, 5) == pytest.approx(exact, rel=1e-12)
+    assert z.variance(5000) is None and "2048" in z.reason("variance")
 
 
 def test_independent_parts_that_are_not_gaussian(axis):

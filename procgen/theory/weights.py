@@ -1,0 +1,134 @@
+"""Weights of linear forms on single shocks, and covariances from them where a state space would be too large.
+
+Sums over shocks are cut where what is left out is a share LEFT_OUT of the variance of a base; a form without
+autoregressions is summed exactly.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from math import comb
+
+import numpy as np
+
+from procgen.theory.arma import PowerSeries, cross_covariance
+from procgen.theory.linear import At, Base, Key, Linear, Sum, base_of
+from procgen.theory.sources import Space
+from procgen.theory.unknown import Unknown
+
+Sided = Sequence[tuple[Linear, int]]  # forms, each at the first (0) or the second (1) step
+LEFT_OUT = 1e-13
+LONGEST = 1 << 20
+MOST_PAIRS = 4096
+
+
+def covariance_by_weights(space: Space, x: Linear, y: Linear, t: np.ndarray, s: np.ndarray) -> np.ndarray:
+    """Cov(x(t), y(s)) as the sum over shocks of products of weights, for sources of constant variance."""
+    if any(source.path is not None for source in x.sources | y.sources):
+        raise Unknown("a long memory of a source whose variance changes")
+    parts = []
+    for a in x.sources:
+        for b in y.sources:
+            scale = space.covariance(a, b)
+            if scale:
+                parts.append((scale, ((x.only([a]), 0), (y.only([b]), 1))))
+
+    def value(steps: list[int]) -> float:
+        return sum(scale * float(np.prod(weights_at(forms, steps), axis=0).sum()) for scale, forms in parts)
+
+    return over_distinct(((x, 0), (y, 1)), t, s, value)
+
+
+def over_distinct(forms: Sided, t: np.ndarray, s: np.ndarray, value: Callable[[list[int]], float]) -> np.ndarray:
+    """A function of two steps at all pairs; it is asked once a lag where only the lag matters."""
+    pairs = np.stack([t.ravel(), s.ravel()], axis=1)
+    if all(form.is_plain and all(isinstance(k, At) for k in form) for form, _ in forms):
+        pairs = pairs - pairs.min(axis=1, keepdims=True)
+    distinct, where = np.unique(pairs, axis=0, return_inverse=True)
+    if len(distinct) > MOST_PAIRS:
+        raise Unknown(f"it is added up shock by shock, and not for more than {MOST_PAIRS} pairs of steps at once")
+    return np.array([value(steps) for steps in distinct.tolist()])[where.ravel()].reshape(t.shape)
+
+
+def weights_at(forms: Sided, steps: list[int]) -> np.ndarray:
+    """Weights of each form on the shocks from the later step back, (forms, shocks)."""
+    top, depth = max(steps), max(_depth(form) for form, _ in forms)
+    if top + depth > LONGEST:
+        raise Unknown(f"weights on more than {LONGEST} shocks")
+    return np.stack([_weights(form, steps[side], top, top + depth + 1) for form, side in forms])
+
+
+def _weights(form: Linear, step: int, top: int, count: int) -> np.ndarray:
+    """Weights of the form at `step` on the shocks of steps top, top - 1, .., top - count + 1."""
+    total = np.zeros(count)
+    delays: dict[Base, dict[int, float]] = {}
+    for key, c in form.items():
+        if isinstance(key, At):
+            delays.setdefault(key.base, {})[key.delay] = c
+        else:
+            response = PowerSeries(np.ones(1), base_of(key).phi).upto(count + step + 1)
+            total += c * _before_step_0(base_of(key), _kept_weights(key, response, step, top, count), top)
+    for base, weights in delays.items():
+        numerator = np.zeros(max(weights) + 1)
+        numerator[list(weights)] = list(weights.values())
+        response = PowerSeries(numerator, base.phi).upto(count + 1)
+        total += _before_step_0(base, _shifted(response, step - top, count), top)
+    return total
+
+
+def _before_step_0(base: Base, weights: np.ndarray, top: int) -> np.ndarray:
+    """The same, without shocks before step 0 for a base that starts there."""
+    if base.started:
+        weights[top + 1 :] = 0.0
+    return weights
+
+
+def _kept_weights(key: Key, response: np.ndarray, step: int, top: int, count: int) -> np.ndarray:
+    """Weights of a running sum or a frozen value whose base has this response."""
+    order = 0
+    while isinstance(key, Sum):
+        key, order = key.of, order + 1
+    if not isinstance(key, At):  # a frozen value, summed `order` times
+        return _times_chosen(step, order) * _shifted(response, -key.back - top, count)
+    sums = [response]
+    for _ in range(order):
+        sums.append(np.cumsum(sums[-1]))
+    total = _shifted(sums[order], step - top, count)
+    for i in range(order):
+        total = total - _times_chosen(step, i) * _shifted(sums[order - i], -top, count)
+    return total
+
+
+def _times_chosen(n: int, order: int) -> float:
+    """Sums from step 1 to n of 1, `order` times over: binomial(n - 1 + order, order)."""
+    return 1.0 if order == 0 else float(comb(n - 1 + order, order)) if n else 0.0
+
+
+def _shifted(values: np.ndarray, first: int, count: int) -> np.ndarray:
+    """values[first], values[first + 1], ..; 0 before the beginning."""
+    index = np.arange(first, first + count)
+    return np.where(index >= 0, values[np.clip(index, 0, len(values) - 1)], 0.0)
+
+
+def _depth(form: Linear) -> int:
+    """How many shocks before the oldest step matter to a form."""
+    return max(_base_depth(base_of(key)) + (key.delay if isinstance(key, At) else _back(key)) for key in form)
+
+
+def _back(key: Key) -> int:
+    while isinstance(key, Sum):
+        key = key.of
+    return 0 if isinstance(key, At) else key.back
+
+
+def _base_depth(base: Base) -> int:
+    if base.started or not base.phi:
+        return 1
+    gamma, series, count = cross_covariance(base.phi, base.phi), PowerSeries(np.ones(1), base.phi), 64
+    left_out = max(LEFT_OUT, 10 * np.finfo(float).eps * gamma.condition)
+    enough = (1.0 - left_out) * float(gamma(np.array(0)))
+    while float((series.upto(count) ** 2).sum()) < enough:
+        count *= 2
+        if count > LONGEST:
+            raise Unknown(f"{base.source.key} forgets too slowly to add up its weights")
+    return count
