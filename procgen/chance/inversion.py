@@ -66,7 +66,7 @@ class Inverse:
             np.multiply(out, t, out=out)
             np.add(out, np.take(piece, cell, out=coefficient, mode="clip"), out=out)
         if self._mirrored:
-            np.maximum(out, 0.0, out=out)
+            np.add(np.maximum(out, 0.0, out=out), 0.0, out=out)  # 0, not -0
             np.negative(out, out=out, where=lower)
 
     def _descend(self, cell: np.ndarray, t: np.ndarray) -> None:
@@ -116,7 +116,7 @@ def _fit(areas: Areas, left: np.ndarray, width: np.ndarray) -> tuple[np.ndarray,
         x = x * t + piece
     p = left + width * ((t + 1) * 0.5)
     missed = np.abs(areas.beyond(x.reshape(-1)).reshape(p.shape) - p)
-    return np.array(pieces), (missed <= ACCURACY * p).all(axis=0)
+    return np.array(pieces), np.asarray((missed <= ACCURACY * p).all(axis=0))
 
 
 def _line(areas: Areas, left: np.ndarray, width: np.ndarray) -> np.ndarray:

@@ -20,7 +20,7 @@ import textwrap
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from contextvars import ContextVar
-from functools import cached_property, update_wrapper
+from functools import cache, cached_property, update_wrapper
 from hashlib import sha256
 from importlib.util import find_spec
 from pathlib import Path
@@ -164,22 +164,27 @@ def _lanes(args: tuple) -> int:
 
 def _compile(text: str, name: str) -> Callable:
     """The function `run` of a module text, compiled, and kept in the user's cache from one process to the next."""
-    import numba
-
-    folder = cache_folder()
-    path = folder / f"{name}-{sha256(text.encode()).hexdigest()[:16]}.py"
+    path = cache_folder() / f"{name}-{sha256(text.encode()).hexdigest()[:16]}.py"
     if not path.exists():
         _write(path, text)
-    kept, numba.config.CACHE_DIR = numba.config.CACHE_DIR, str(folder)
-    try:
-        compiled = numba.njit(nogil=True, fastmath=False, cache=True)
-        scope: dict[str, Any] = {"np": np, "compiled": compiled, "__name__": __name__}  # numba's cache imports it
-        exec(compile(text, str(path), "exec"), scope)  # our own text, not the file's: that only lends its name
-    finally:
-        numba.config.CACHE_DIR = kept
+    scope: dict[str, Any] = {"np": np, "compiled": compiled_function, "__name__": __name__}  # numba's cache imports it
+    exec(compile(text, str(path), "exec"), scope)  # our own text, not the file's: that only lends its name
     return scope["run"]
 
 
+def compiled_function(function: Callable) -> Callable:
+    """A function compiled by numba with IEEE arithmetic and without the lock, kept in the user's cache."""
+    import numba
+
+    config: Any = numba.config
+    kept, config.CACHE_DIR = config.CACHE_DIR, str(cache_folder())
+    try:
+        return numba.njit(nogil=True, fastmath=False, cache=True)(function)
+    finally:
+        config.CACHE_DIR = kept
+
+
+@cache
 def cache_folder() -> Path:
     """The folder of compiled kernels: the user's cache, never the installation; a temporary one where none can be."""
     if sys.platform == "win32":

@@ -11,12 +11,13 @@ counted backwards, step -1 first, so that a longer past moves nothing.
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import dataclass
 from functools import cached_property
 from hashlib import sha256
 
 import numpy as np
+
+from procgen.chance.kernel import is_compiling
 
 STREAM_VERSION = 1
 LANES = 16
@@ -55,9 +56,8 @@ class Stream:
     ) -> np.ndarray:
         """Raw 64-bit words, uint64 (steps, paths), row i being step first_step + i (negative steps allowed)."""
         _check_address(first_path, paths, first_step, steps)
-        if out is None:
-            out = np.empty((steps, paths), np.uint64)
-        self._fill(first_path, paths, first_step, steps, out, None)
+        out = np.empty((steps, paths), np.uint64) if out is None else out
+        self._fill(first_path, paths, first_step, steps, out)
         return out
 
     def uniforms(
@@ -65,28 +65,27 @@ class Stream:
     ) -> np.ndarray:
         """Uniforms in (0, 1), float64 (steps, paths): odd multiples of 2**-53, so 1 - u is exact too."""
         _check_address(first_path, paths, first_step, steps)
-        if out is None:
-            out = np.empty((steps, paths))
-        self._fill(first_path, paths, first_step, steps, out.view(np.uint64), _uniform_bits)
+        out = np.empty((steps, paths)) if out is None else out
+        self._fill(first_path, paths, first_step, steps, out)
         return out
 
-    def _fill(
-        self,
-        first_path: int,
-        paths: int,
-        first_step: int,
-        steps: int,
-        out: np.ndarray,
-        convert: Callable[[np.ndarray], object] | None,
-    ) -> None:
+    def _fill(self, first_path: int, paths: int, first_step: int, steps: int, out: np.ndarray) -> None:
+        """Words, or uniforms where out is float64."""
         if out.shape != (steps, paths):
             raise ValueError(f"expected out of shape (steps, paths) = ({steps}, {paths}), got {out.shape}")
+        draw = _Compiled(self.key) if is_compiling() else _Plain(self.key)
         before = min(steps, max(0, -first_step))
-        draw = _Generator(self.key, first_path, paths, convert)
-        if before:
-            draw.section(1, -first_step - before, out[:before][::-1])
-        if steps > before:
-            draw.section(0, first_step + before, out[before:])
+        for section, first, rows in (
+            (1, -first_step - before, out[:before][::-1]),
+            (0, first_step + before, out[before:]),
+        ):
+            if not len(rows):
+                continue
+            for group in range(first_path // LANES, -(-(first_path + paths) // LANES)):
+                low = max(first_path, group * LANES)
+                high = min(first_path + paths, (group + 1) * LANES)
+                columns = rows[:, low - first_path : high - first_path]
+                draw.fill(section, group, first, slice(low - group * LANES, high - group * LANES), columns)
 
 
 def uniforms_of(words: np.ndarray) -> np.ndarray:
@@ -104,38 +103,46 @@ def _uniform_bits(words: np.ndarray) -> None:
     np.subtract(floats, 1 - 2.0**-53, out=floats)  # exact: the result has 53 significant bits at most
 
 
-class _Generator:
-    """One Philox generator moved from lane group to lane group."""
+class _Plain:
+    """NumPy's Philox, moved from lane group to lane group."""
 
-    def __init__(self, key: tuple[int, int], first_path: int, paths: int, convert: Callable | None) -> None:
+    def __init__(self, key: tuple[int, int]) -> None:
         self.philox = np.random.Philox(key=np.array(key, np.uint64))
         self.state = self.philox.state
-        self.first_path, self.last_path = first_path, first_path + paths
-        self.convert = convert
 
-    def section(self, section: int, first_position: int, rows: np.ndarray) -> None:
-        """Fill rows (steps, paths) with the steps first_position, first_position + 1 ... of a section."""
-        for group in range(self.first_path // LANES, -(-self.last_path // LANES)):
-            first, last = max(self.first_path, group * LANES), min(self.last_path, (group + 1) * LANES)
-            columns = slice(first - self.first_path, last - self.first_path)
-            lanes = slice(first - group * LANES, last - group * LANES)
-            self._seek(first_position, group, section)
-            for row in range(0, rows.shape[0], _ROWS_A_RUN):
-                target = rows[row : row + _ROWS_A_RUN, columns]
-                raw = self.philox.random_raw(len(target) * LANES)
-                if self.convert is not None:
-                    self.convert(raw)
-                target[...] = raw.reshape(-1, LANES)[:, lanes]
+    def fill(self, section: int, group: int, first: int, lanes: slice, out: np.ndarray) -> None:
+        """Some lanes of a group, at the positions first, first + 1 ... of a section, into out (positions, lanes)."""
+        self._seek(section, group, first)
+        for row in range(0, len(out), _ROWS_A_RUN):
+            target = out[row : row + _ROWS_A_RUN]
+            raw = self.philox.random_raw(len(target) * LANES)
+            if out.dtype == np.float64:
+                _uniform_bits(raw)
+            target[...] = raw.view(out.dtype).reshape(-1, LANES)[:, lanes]
 
-    def _seek(self, position: int, group: int, section: int) -> None:
+    def _seek(self, section: int, group: int, first: int) -> None:
         """Set the counter one before the wanted block: NumPy increments it before it makes a block."""
-        block = position * (LANES // _WORDS_A_BLOCK) + (group << 64) + (section << 128)
+        block = first * (LANES // _WORDS_A_BLOCK) + (group << 64) + (section << 128)
         before = (block - 1) % 2**256
         counter = self.state["state"]["counter"]
         for word in range(4):
             counter[word] = (before >> (64 * word)) & (2**64 - 1)
         self.state["buffer_pos"] = _WORDS_A_BLOCK  # nothing left over from the last block
         self.philox.state = self.state
+
+
+class _Compiled:
+    """The same fillings by `procgen.chance.compiled`."""
+
+    def __init__(self, key: tuple[int, int]) -> None:
+        from procgen.chance import compiled
+
+        self.functions = {np.dtype(np.float64): compiled.uniforms, np.dtype(np.uint64): compiled.words}
+        self.key = tuple(map(np.uint64, key))
+
+    def fill(self, section: int, group: int, first: int, lanes: slice, out: np.ndarray) -> None:
+        address = map(np.uint64, (group, section, first))
+        self.functions[out.dtype](*self.key, *address, lanes.start, lanes.stop, out)
 
 
 def _check_address(first_path: int, paths: int, first_step: int, steps: int) -> None:

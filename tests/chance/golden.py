@@ -12,7 +12,7 @@ from pathlib import Path
 import numpy as np
 
 from procgen.chance import portable
-from procgen.chance.kernel import available, kernel
+from procgen.chance.kernel import available, compiling, kernel
 from procgen.chance.laws import LAWS
 from procgen.chance.streams import STREAM_VERSION, Stream
 
@@ -62,6 +62,8 @@ def digests():
     forms = {"kernel": recursion.plain}
     if available():
         forms["kernel compiled"] = recursion.compiled
+        with compiling():
+            found["uniforms compiled"] = STREAM.uniforms(5, 200, -100, 400)
     for name, form in forms.items():
         out = np.empty_like(z)
         last = form(z, out, np.ones(z.shape[1]), 0.1, 0.1, 0.8)

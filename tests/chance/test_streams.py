@@ -12,6 +12,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 
+from procgen.chance.kernel import compiling
 from procgen.chance.streams import LANES, STREAM_VERSION, Stream, uniforms_of
 
 GOLDEN = json.loads((Path(__file__).parent.parent / "golden" / "chance.json").read_text())
@@ -122,6 +123,27 @@ def test_any_rectangle_is_part_of_the_bigger_one(first_path, paths, first_step, 
     assert np.array_equal(STREAM.words(first_path, paths, first_step, steps), expected)
     uniforms = STREAM.uniforms(first_path, paths, first_step, steps)
     assert np.array_equal(uniforms, uniforms_of(expected))
+
+
+@pytest.mark.parametrize(("first_path", "paths", "first_step", "steps"), RECTANGLES)
+def test_compiled_words_are_the_same(first_path, paths, first_step, steps):
+    """The compiled generator, which makes only the lanes it needs."""
+    pytest.importorskip("numba", reason="the extra `speed` compiles")
+    rectangle = (first_path, paths, first_step, steps)
+    wide = np.zeros((steps, 2 * paths))
+    with compiling():
+        words = STREAM.words(*rectangle)
+        uniforms = STREAM.uniforms(*rectangle, out=wide[:, ::2])
+    assert np.array_equal(words, STREAM.words(*rectangle))
+    assert np.array_equal(uniforms, STREAM.uniforms(*rectangle))
+    assert not wide[:, 1::2].any()
+
+
+def test_compiled_words_at_far_addresses():
+    pytest.importorskip("numba", reason="the extra `speed` compiles")
+    with compiling():
+        for path, step in itertools.product((2**40 + 5, 2**61 + 1), (10**15, -(10**15))):
+            assert STREAM.words(path, 1, step, 1)[0, 0] == word_at(STREAM, path, step)
 
 
 def test_long_runs_equal_their_pieces():

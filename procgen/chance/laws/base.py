@@ -6,13 +6,13 @@ import math
 from collections.abc import Callable
 from dataclasses import dataclass, fields
 from itertools import pairwise
-from typing import Any, ClassVar
+from typing import Any, ClassVar, cast
 
 import numpy as np
 
 from procgen.chance.blocks import Scratch, blockwise
 from procgen.chance.normal import normal_tail_of
-from procgen.spec.declare import Parameter
+from procgen.spec.declare import Parameter, Real
 
 
 @dataclass(frozen=True)
@@ -31,12 +31,10 @@ class Law:
 
     def __post_init__(self) -> None:
         for parameter in self.parameters:
-            value = getattr(self, parameter.name)
+            value, domain = getattr(self, parameter.name), cast(Real, parameter.domain)
             number = isinstance(value, int | float) and not isinstance(value, bool)
-            if not (number and math.isfinite(value) and parameter.domain.holds(value)):
-                raise ValueError(
-                    f"{self.name}: expected {parameter.name} to be {parameter.domain.describe()}, got {value!r}"
-                )
+            if not (number and math.isfinite(value) and domain.holds(value)):
+                raise ValueError(f"{self.name}: expected {parameter.name} to be {domain.describe()}, got {value!r}")
             object.__setattr__(self, parameter.name, float(value))
 
     def __str__(self) -> str:
