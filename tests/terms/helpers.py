@@ -29,8 +29,8 @@ def jacobian(graph: Graph, steps: int, monkeypatch, width: int = 4096) -> dict[s
     """Response of every series to every primary normal that it uses, (steps, normals).
 
     Path 0 sees no shock at all, path k sees a single unit normal: what the value code does to it, less what it
-    does to nothing, is column k. For a linear graph (of shocks of any law) J J′ is therefore the exact covariance of the
-    values as they are drawn, with no theory and no sampling in it.
+    does to nothing, is column k. For a linear graph, with shocks of any law, J J′ is therefore the exact
+    covariance of the values as they are drawn, with no theory and no sampling in it.
     """
     places: dict[tuple, int] = {}
 
