@@ -25,7 +25,7 @@ from hashlib import sha256
 from importlib.util import find_spec
 from pathlib import Path
 from types import FunctionType
-from typing import Any
+from typing import Any, Literal
 
 import numpy as np
 
@@ -172,14 +172,14 @@ def _compile(text: str, name: str) -> Callable:
     return scope["run"]
 
 
-def compiled_function(function: Callable) -> Callable:
+def compiled_function(function: Callable, inline: Literal["never", "always"] = "never") -> Callable:
     """A function compiled by numba with IEEE arithmetic and without the lock, kept in the user's cache."""
     import numba
 
     config: Any = numba.config
     kept, config.CACHE_DIR = config.CACHE_DIR, str(cache_folder())
     try:
-        return numba.njit(nogil=True, fastmath=False, cache=True)(function)
+        return numba.njit(nogil=True, fastmath=False, cache=True, inline=inline)(function)
     finally:
         config.CACHE_DIR = kept
 
