@@ -7,13 +7,16 @@ calling process draws too: while workers import (0.2 s) it is already at work.
 
 from __future__ import annotations
 
+import contextlib
 import json
 import os
+import signal
 import subprocess
 import sys
 import threading
 from collections import deque
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Sequence
+from types import FrameType
 from typing import Any
 
 from procgen.ensemble.errors import EnsembleError, system_sentence
@@ -46,6 +49,7 @@ class Crew:
         self.records: list[dict[str, Any]] = []
         self.error: BaseException | None = None
         self._progress, self._done, self._rows = progress, done, rows
+        self._caller = threading.current_thread()
         self._lock = threading.Lock()
 
     def tick(self, rows: int) -> None:
@@ -54,7 +58,7 @@ class Crew:
             self._done += rows
         if self.error is not None:
             raise Stopped
-        if self._progress is not None and threading.current_thread() is threading.main_thread():
+        if threading.current_thread() is self._caller:
             self.show()
 
     def show(self) -> None:
@@ -70,8 +74,28 @@ class Crew:
             self.records += records
 
     def fail(self, error: BaseException) -> None:
-        with self._lock:
-            self.error = self.error or error
+        self.error = self.error or error
+
+    @contextlib.contextmanager
+    def interruptible(self) -> Iterator[None]:
+        """Let Ctrl-C stop the work at the next tick; the second Ctrl-C stops it at once.
+
+        Where Python delivers the exception itself, it can be lost: in a `__del__` it is only printed.
+        """
+
+        def stop(number: int, frame: FrameType | None) -> None:
+            if self.error is not None:
+                raise KeyboardInterrupt
+            self.fail(KeyboardInterrupt())
+
+        ours = self._caller is threading.main_thread() and signal.getsignal(signal.SIGINT) is signal.default_int_handler
+        if ours:
+            signal.signal(signal.SIGINT, stop)
+        try:
+            yield
+        finally:
+            if ours:
+                signal.signal(signal.SIGINT, signal.default_int_handler)
 
 
 def run(
@@ -88,9 +112,17 @@ def run(
     chain that failed, or when a worker died; KeyboardInterrupt passes through after the workers have ended.
     """
     crew = Crew(tasks, progress, done, rows)
+    with crew.interruptible():
+        _work(crew, min(workers, len(tasks)) - 1, inherit)
+    if crew.error is not None:
+        raise crew.error
+    return crew.records
+
+
+def _work(crew: Crew, helping: int, inherit: int | None) -> None:
     helpers: list[Helper] = []
     try:
-        for _ in range(min(workers, len(tasks)) - 1):
+        for _ in range(helping):
             helpers.append(Helper(crew, inherit))
         while (task := crew.next()) is not None:
             crew.keep(render_chain(task, crew.tick))
@@ -105,9 +137,6 @@ def run(
     finally:
         for helper in helpers:
             helper.end()
-    if crew.error is not None:
-        raise crew.error
-    return crew.records
 
 
 class Helper(threading.Thread):
