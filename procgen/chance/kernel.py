@@ -12,8 +12,10 @@ the extra `speed`), one path after another runs through the same text as scalars
 from __future__ import annotations
 
 import ast
+import atexit
 import inspect
 import os
+import shutil
 import sys
 import tempfile
 import textwrap
@@ -198,7 +200,9 @@ def cache_folder() -> Path:
             return folder
     except OSError:
         pass
-    return Path(tempfile.mkdtemp(prefix="procgen-kernels-"))
+    temporary = tempfile.mkdtemp(prefix="procgen-kernels-")
+    atexit.register(shutil.rmtree, temporary, ignore_errors=True)
+    return Path(temporary)
 
 
 def _write(path: Path, text: str) -> None:
