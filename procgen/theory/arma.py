@@ -124,7 +124,7 @@ def _split(a: np.ndarray, b: np.ndarray) -> tuple[np.ndarray, np.ndarray, float]
     residual = one - system.astype(np.longdouble) @ solution.astype(np.longdouble)
     solution = solution + lu_solve(factors, residual.astype(float))
     inverse = lapack.dgecon(factors[0], np.abs(system).sum(axis=0).max())[0]
-    condition = 1.0 / inverse if inverse > 0.0 else np.inf
+    condition = 1.0 / max(float(inverse), 1e-18)
     if condition > HOPELESS and size > LARGEST_RATIONAL:
         raise Unknown(f"its coefficients are too near to a unit root (condition number {condition:.1g})")
     if condition > WEAK and size <= LARGEST_RATIONAL:

@@ -193,8 +193,9 @@ def _line(steps: Steps, values: np.ndarray, tolerance: float) -> tuple[float, fl
     if np.ptp(values) <= tolerance:
         return float(values[0]), 0.0
     slope = (values[-1] - values[0]) / (steps[-1] - steps[0])
-    straight = np.abs(values - (values[0] + slope * steps)).max() <= tolerance
-    return (float(values[0]), float(slope)) if straight else None
+    level = values[0] - slope * steps[0]
+    straight = np.abs(values - (level + slope * steps)).max() <= tolerance
+    return (float(level), float(slope)) if straight else None
 
 
 def _integrated(piece: Piece, name: str) -> Known:

@@ -144,9 +144,10 @@ def _few_moments(space, group, factors, tilts, t, s) -> Pair:
     """Moments of a group that is not Gaussian: orders 1 and 2, and 3 and 4 of a single source."""
     zero, order = np.zeros(t.shape), len(factors)
     if any(tilts):
-        heavy = any(source.power_tailed for source in group)
-        why = "no finite mean: its tails are power laws" if heavy else "no closed moments"
-        raise Unknown(f"an exponential of {_names(group)} has {why}")
+        heavy = [source for tilt in tilts for source in tilt.sources if source.power_tailed]
+        if heavy:
+            raise Unknown(f"an exponential of {_names(heavy)} has no finite mean: its tails are power laws")
+        raise Unknown(f"moments of {_names(group)} in or beside an exponential have no closed form")
     if order == 1 or (order % 2 and all(source.symmetric for source in group)):
         return zero, zero  # flipping all signs turns an odd product round
     one = group[0] if len(group) == 1 else None

@@ -103,6 +103,12 @@ def test_a_line_that_bends_before_step_0_is_not_a_line(axis):
     np.testing.assert_allclose(SeriesTheory("x", bent.lag(5)).mean([0, 1, 4]), [-3.0, -3.0, -1.0])
 
 
+def test_a_trend_is_named_beside_a_season(axis):
+    x = SeriesTheory("x", trend(axis) + seasonal(axis) + noise(axis))
+    assert "trend slope 0.5 a step in x.trend" in x.stationarity.reasons
+    assert x.expression.mean_path.level == 3.0 and x.expression.mean_path.slope == 0.5
+
+
 def test_known_paths_are_summed_exactly(axis):
     """Running sums of a line and of a pattern against plain addition, and differenced back to themselves."""
     for f in (trend(axis), seasonal(axis), seasonal(axis) * 2.0 + trend(axis, -0.1)):
