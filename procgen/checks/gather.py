@@ -13,6 +13,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.checks.errors import ErrorLane, ErrorSums
 from procgen.checks.probes import CrossPlan, SeriesPlan
 from procgen.checks.recover import Cannot, Expected, Route
 from procgen.checks.shocks import MEMORY_LAGS, CrossSums, ShockLane, ShockSums
@@ -59,6 +60,7 @@ class Lane:
         self.prints = np.zeros((len(plan.series), paths), dtype=np.uint64)
         self.carriers: dict[str, Any] = {}
         self.shocks: dict[str, ShockLane] = {}
+        self.errors: dict[str, ErrorLane] = {}
         self.carry: dict[tuple[str, str], Any] = {}
 
 
@@ -83,11 +85,9 @@ class Gather:
         self.gaps: dict[str, float] = {}  # series without chance -> largest distance from theory
         self.noise: dict[str, float] = {}  # series -> variance that rounding adds to a recovered shock
         self.routes = {name: way for name, way in plan.routes.items() if isinstance(way, Route)}
-        self.shocks = {
-            series.name: ShockSums(self.routes[series.name].scores, plan.steps, _lags(series))
-            for series in plan.series
-            if series.name in self.routes
-        }
+        scores = {name: way.scores for name, way in self.routes.items() if way.scores is not None}
+        self.shocks = {s.name: ShockSums(scores[s.name], plan.steps, _lags(s)) for s in plan.series if s.name in scores}
+        self.errors = {name: ErrorSums() for name in self.routes if name not in scores}
         self.cross = {pair: CrossSums() for pair in plan.shock_pairs}
 
     # blocks
@@ -129,6 +129,8 @@ class Gather:
                 self._compare(plan, x, lane.step)
             if plan.name in self.shocks:
                 scores[plan.name] = self._recover(lane, plan.name, x)
+            elif plan.name in self.errors:
+                self._predict(lane, plan.name, x)
         self._cross(lane, scores)
         lane.step += len(tiles[0])
 
@@ -153,9 +155,13 @@ class Gather:
         for k, lag in enumerate(pool.lags):
             first = max(before, lag)
             if first < len(both):
-                product = np.einsum("tp,tp->p", both[first:], both[first - lag : len(both) - lag])
-                known = pool.covariance[k, at + first - before : at + len(rows)]
-                sums[:, 1 + k] += product - np.nansum(known)
+                places = slice(at + first - before, at + len(rows))
+                earlier = both[first - lag : len(both) - lag]
+                product = np.einsum("tp,tp->p", both[first:], earlier)
+                if pool.slope is not None and lag:
+                    sums[:, 1 + k] += product - np.einsum("t,tp,tp->p", pool.slope[k, places], earlier, earlier)
+                else:
+                    sums[:, 1 + k] += product - pool.covariance[k, places].sum()
         lane.tails[column] = both[max(0, len(both) - max(pool.lags)) :].copy()
 
     def _compare(self, plan: SeriesPlan, x: NDArray, step: int) -> None:
@@ -175,6 +181,13 @@ class Gather:
                 self.noise[name] = _rounding_noise(route, x[:, : min(64, lane.paths)], lane.first_path)
         z, lane.carriers[name] = route.tile(x, lane.carriers[name], lane.first_path, lane.step)
         return self.shocks[name].absorb(z, lane.step, lane.shocks[name])
+
+    def _predict(self, lane: Lane, name: str, x: NDArray) -> None:
+        route = self.routes[name]
+        if name not in lane.errors:
+            lane.carriers[name], lane.errors[name] = route.start(lane.paths), ErrorLane.start(lane.paths)
+        z, lane.carriers[name] = route.tile(x, lane.carriers[name], lane.first_path, lane.step)
+        self.errors[name].absorb(z, lane.errors[name])
 
     def _cross(self, lane: Lane, scores: Mapping[str, NDArray]) -> None:
         for pair, sums in self.cross.items():
@@ -204,6 +217,8 @@ class Gather:
                 powers.absorb(sums / np.array([width] + [width - lag for lag in series.pool.lags]))
         for name, shock_lane in lane.shocks.items():
             self.shocks[name].finish(shock_lane)
+        for name, error_lane in lane.errors.items():
+            self.errors[name].finish(error_lane)
 
     def finish(self) -> None:
         """To be called after the last block; counts paths that never reached the last step."""
@@ -224,6 +239,8 @@ class Gather:
                 largest[name] = max(largest.get(name, 0.0), value)
         for name, shocks in self.shocks.items():
             shocks.merge(other.shocks[name])
+        for name, errors in self.errors.items():
+            errors.merge(other.errors[name])
         for pair, products in self.cross.items():
             products.merge(other.cross[pair])
 
@@ -238,22 +255,28 @@ def _means(plan: Plan) -> NDArray:
 
 
 def _products(plan: Plan, rows: NDArray) -> NDArray:
-    """Products of deviations minus their theory; NaN where theory does not know them."""
+    """Products minus their theory, or minus the stated slope times the earlier square where their sd is not known."""
     out = np.full((len(rows), len(plan.products)), np.nan)
     for k, (column, i, j) in enumerate(plan.products):
         series, at = plan.series[column], plan.offset[column]
         known = series.covariance.get((i, j)) if i != j else float(series.variance[i])
         if not series.unknown and known is not None and np.isfinite(known):
-            out[:, k] = rows[:, at + i] * rows[:, at + j] - known
+            if i == j or series.product_sd.get((i, j)) is not None:
+                out[:, k] = rows[:, at + i] * rows[:, at + j] - known
+            elif not series.constant[i]:
+                out[:, k] = rows[:, at + i] * (rows[:, at + j] - known / series.variance[i] * rows[:, at + i])
     return out
 
 
 def _cross_products(plan: Plan, rows: NDArray) -> NDArray:
+    """Products of two series beside the stated slope of the first on the second."""
     columns = []
     for pair in plan.cross:
+        variance = plan.series[pair.second].variance
         for (i, j), known in zip(pair.places, pair.covariance, strict=True):
-            product = rows[:, plan.offset[pair.first] + i] * rows[:, plan.offset[pair.second] + j]
-            columns.append(product - (np.nan if known is None else known))
+            a, b = rows[:, plan.offset[pair.first] + i], rows[:, plan.offset[pair.second] + j]
+            usable = known is not None and variance[j] > 0
+            columns.append(b * (a - known / variance[j] * b) if usable else np.full(len(rows), np.nan))
     return np.array(columns).T if columns else np.zeros((len(rows), 0))
 
 

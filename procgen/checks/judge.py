@@ -110,35 +110,53 @@ class Sample:
         fourth = m4 - 4 * m1 * m3 + 6 * m1 * m1 * m2 - 3 * m1**4
         return cls(n, m1, math.sqrt(v * n / max(n - 1, 1)), third / v**1.5, fourth / v**2 - 3)
 
+    def scaled(self, factor: float) -> Sample:
+        """The same numbers times a positive factor."""
+        return replace(self, mean=self.mean * factor, sd=self.sd * factor)
+
 
 def sample_mean(sample: Sample, theory: float, sd: float | None = None) -> Finding:
     """The mean of n independent numbers that need not be normal; `sample.mean` is relative to `theory`.
 
     With the theoretical `sd` the tail is that of a matched chi-square; without it, the self-normalised sum's.
     """
-    n = sample.n
-    root = math.sqrt(n)
-    if sd is not None:
-        error, skew = sd / root, sample.skew / root
-        log_p = tails.two_sided(*tails.pearson3(sample.mean / error, skew))
-        gauge = abs(sample.excess - 1.5 * sample.skew**2) / (24 * n)
-        order = 4
-    else:
-        error, skew = sample.sd / root, sample.skew / root
-        t = sample.mean / error
-        x = t / math.sqrt((n - 1 + t * t) / n)
-        log_p = tails.two_sided(*tails.self_normalised(x, sample.skew, n))
-        gauge = abs(sample.skew) / (3 * root)
-        order = 3
+    return _known_sd(sample, theory, sd) if sd is not None else _studentised(sample, theory)
+
+
+def _known_sd(sample: Sample, theory: float, sd: float) -> Finding:
+    n, error, skew = sample.n, sd / math.sqrt(sample.n), sample.skew / math.sqrt(sample.n)
+    log_p = tails.two_sided(*tails.pearson3(sample.mean / error, skew))
+    excess = abs(sample.excess - 1.5 * sample.skew**2)
+    return Finding(
+        theory,
+        theory + sample.mean,
+        error,
+        log_p,
+        lambda level: power.shift(level, error, abs(skew)),
+        lambda level: _few(n) or excess_doubt(excess, n, "paths")(level),
+    )
+
+
+def _studentised(sample: Sample, theory: float) -> Finding:
+    n, error = sample.n, sample.sd / math.sqrt(sample.n)
+    t = sample.mean / error
+    x = t / math.sqrt((n - 1 + t * t) / n)
+    log_p = tails.two_sided(*tails.self_normalised(x, sample.skew, n))
+    gauge = abs(sample.skew) / (3 * math.sqrt(n))
 
     def doubt(level: float) -> str | None:
-        if n < FEW_PATHS:
-            return f"only {n} paths and no exact law for this estimate"
-        if gauge * power.needed(level) ** order > _TRUSTED:
+        if gauge * power.needed(level) ** 3 > 1.0:
             return f"{n} paths are too few for the skewed tail that a p of {level:.1g} lies in"
-        return None
+        return _few(n)
 
-    return Finding(theory, theory + sample.mean, error, log_p, lambda level: power.shift(level, error), doubt)
+    def detect(level: float) -> float:
+        return error * (power.self_normalised(level, tails.SAFE * gauge) + power.Z_POWER)
+
+    return Finding(theory, theory + sample.mean, error, log_p, detect, doubt)
+
+
+def _few(n: int) -> str | None:
+    return f"only {n} paths and no exact law for this estimate" if n < FEW_PATHS else None
 
 
 def squares(q: float, dof: int, n: int) -> Finding:
@@ -187,7 +205,7 @@ def anderson_darling(u: NDArray) -> Finding:
 
     def detect(level: float) -> float:
         # A shift sends sqrt(n) times its first Legendre coefficient into the leading chi-square, of weight 1/2.
-        reach = math.sqrt(2 * (-math.log(level) + 0.5)) + 1.2815515655446004
+        reach = math.sqrt(2 * (-math.log(level) + 0.5)) + power.Z_POWER
         return reach * reach / 2
 
     return Finding(1.0, a2, 0.7611, tails.anderson_darling(a2), detect)

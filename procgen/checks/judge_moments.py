@@ -10,7 +10,7 @@ import numpy as np
 from procgen.checks import judge
 from procgen.checks.gather import Gather
 from procgen.checks.judge import FEW_PATHS, Finding, Sample
-from procgen.checks.probes import CrossPlan, SeriesPlan
+from procgen.checks.probes import CrossPlan, Pool, SeriesPlan
 from procgen.checks.sums import Powers
 from procgen.checks.verdict import Check
 
@@ -127,7 +127,12 @@ def _covariances(gather: Gather, column: int) -> Iterator[Check]:
                 yield Check.of(plan.name, "covariance", probe, "memory", finding)
         else:
             sample = _sample(gather.products, gather.plan.products.index((column, i, j)))
-            yield _limit(plan, "covariance", probe, "memory", sample, known, 2, plan.product_sd.get((i, j)))
+            sd, variance = plan.product_sd.get((i, j)), float(plan.variance[i])
+            if sd is not None:
+                yield _limit(plan, "covariance", probe, "memory", sample, known, 2, sd)
+            else:
+                slope = sample.scaled(1 / variance)
+                yield _limit(plan, "slope on the earlier step", probe, "memory", slope, known / variance, 2, None)
 
 
 def _growth(gather: Gather, column: int) -> Iterator[Check]:
@@ -181,23 +186,31 @@ def _pooled(gather: Gather, column: int) -> Iterator[Check]:
     pool = plan.pool
     if powers is None or pool is None:
         return
-    for k, what in enumerate(pool.statistics()):
-        lag = 0 if k == 0 else pool.lags[k - 1]
-        kind = ("level", "spread", "memory")[min(k, 2)]
-        probe = f"steps {pool.first}–{pool.last - 1}" + (f", lag {lag}" if lag else "")
+    for k, lag in enumerate((-1, *pool.lags)):
         sample = _sample(powers, k)
-        if sample.n == 0:
-            continue
-        theory = float(np.mean(pool.mean)) if k == 0 else float(np.nanmean(pool.covariance[k - 1]))
-        if pool.exact is None:
-            yield _limit(plan, what, probe, kind, sample, theory, 1 if k == 0 else 2, None)
-        elif k == 0:
-            sd = math.sqrt(float(pool.exact[0, 0]))
-            yield Check.of(plan.name, what, probe, kind, judge.normal_mean(theory + sample.mean, theory, sd, sample.n))
-        else:
-            yield Check.of(plan.name, what, probe, kind, judge.quadratic(theory + sample.mean, pool.exact[k], sample.n))
-    if plan.name not in gather.shocks:
+        if sample.n:
+            yield _pooled_one(plan, pool, k, lag, sample)
+    if plan.name not in gather.routes:
         yield from _neighbours(plan, powers)
+
+
+def _pooled_one(plan: SeriesPlan, pool: Pool, k: int, lag: int, sample: Sample) -> Check:
+    """Average k of the pool: the mean (lag -1), the variance (lag 0), or the memory at a lag."""
+    probe = f"steps {pool.first}–{pool.last - 1}" + (f", lag {lag}" if lag > 0 else "")
+    theory = float(np.mean(pool.mean)) if lag < 0 else float(np.nanmean(pool.covariance[k - 1]))
+    what = "mean over steps" if lag < 0 else "variance over steps" if lag == 0 else "autocovariance over steps"
+    kind = "level" if lag < 0 else "spread" if lag == 0 else "memory"
+    if pool.exact is not None:
+        if lag < 0:
+            finding = judge.normal_mean(theory + sample.mean, theory, math.sqrt(float(pool.exact[0, 0])), sample.n)
+        else:
+            finding = judge.quadratic(theory + sample.mean, pool.exact[k], sample.n)
+        return Check.of(plan.name, what, probe, kind, finding)
+    if lag > 0 and pool.slope is not None:
+        variance = float(pool.covariance[0].mean())
+        slope = float(np.nanmean(pool.slope[k - 1]))
+        return _limit(plan, "slope over steps", probe, kind, sample.scaled(1 / variance), slope, 2, None)
+    return _limit(plan, what, probe, kind, sample, theory, 1 if lag < 0 else 2, pool.square_sd if lag == 0 else None)
 
 
 def _neighbours(plan: SeriesPlan, powers: Powers) -> Iterator[Check]:
@@ -256,7 +269,7 @@ def _cross_one(
             yield Check.of(name, "covariance between series", probe, "dependence", finding)
         return
     weaker = a if a.highest <= b.highest else b
-    sample = _sample(gather.crossed, k)
-    check = _limit(weaker, "covariance between series", probe, "dependence", sample, known, 2, None)
+    sample = _sample(gather.crossed, k).scaled(1 / float(b.variance[j]))
+    check = _limit(weaker, "slope between series", probe, "dependence", sample, known / float(b.variance[j]), 2, None)
     check.series = name
     yield check

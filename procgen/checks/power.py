@@ -9,7 +9,7 @@ from __future__ import annotations
 import math
 
 POWER = 0.9
-_Z_POWER = 1.2815515655446004  # normal quantile of 0.9
+Z_POWER = 1.2815515655446004  # normal quantile of 0.9
 
 
 def needed(level: float) -> float:
@@ -30,7 +30,20 @@ def critical(level: float, skew: float = 0.0, excess: float = 0.0) -> float:
 
 def shift(level: float, error: float, skew: float = 0.0, excess: float = 0.0) -> float:
     """Detectable shift of an estimate whose standard error does not change under the departure."""
-    return error * (critical(level, skew, excess) + _Z_POWER)
+    return error * (critical(level, skew, excess) + Z_POWER)
+
+
+def self_normalised(level: float, gauge: float) -> float:
+    """The self-normalised sum that passes `level` on its worse side, where the tail is raised by exp(gauge x^3)."""
+    from scipy.special import log_ndtr, ndtri
+
+    x = needed(level)
+    for _ in range(60):
+        aim = math.log(level / 2) - gauge * x**3
+        if aim < -300:
+            return math.inf
+        x = -float(ndtri(math.exp(aim)))
+    return x if abs(float(log_ndtr(-x)) + gauge * x**3 - math.log(level / 2)) < 0.01 else math.inf
 
 
 def variance(level: float, sigma2: float, dof: int) -> float:
@@ -51,7 +64,7 @@ def covariance(level: float, s1: float, s2: float, rho: float, n: int) -> float:
     reach = error * critical(level, skew, excess)
     departure = reach
     for _ in range(60):
-        departure = reach + _Z_POWER * math.sqrt((1 + (r + departure) ** 2) / n)
+        departure = reach + Z_POWER * math.sqrt((1 + (r + departure) ** 2) / n)
     return size * departure
 
 
@@ -61,7 +74,7 @@ def chi_square(level: float, dof: int) -> float:
     from scipy.stats import chi2, ncx2
 
     point = float(chi2.isf(level, dof))
-    start = (needed(2 * level) + _Z_POWER) ** 2 + 10 * math.sqrt(dof)
+    start = (needed(2 * level) + Z_POWER) ** 2 + 10 * math.sqrt(dof)
     high = start
     while ncx2.sf(point, dof, high) < POWER:
         high *= 2
@@ -73,7 +86,7 @@ def gap(level: float, n: int) -> float:
 
     At the point of the largest gap the empirical share is binomial, so its spread is at most 1/(2 sqrt n).
     """
-    return math.sqrt(math.log(2 / level) / (2 * n)) + _Z_POWER / (2 * math.sqrt(n))
+    return math.sqrt(math.log(2 / level) / (2 * n)) + Z_POWER / (2 * math.sqrt(n))
 
 
 def share(level: float, p: float, n: int) -> float:
@@ -83,5 +96,5 @@ def share(level: float, p: float, n: int) -> float:
     departure = reach
     for _ in range(60):
         other = min(1.0, p + departure)
-        departure = reach + _Z_POWER * math.sqrt(max(other * (1 - other), 0.0) / n)
+        departure = reach + Z_POWER * math.sqrt(max(other * (1 - other), 0.0) / n)
     return departure

@@ -71,7 +71,8 @@ class SeriesPlan:
 class Pool:
     """Averages over a window of steps: what is averaged along each path, minus its theory.
 
-    Row k of `theory` is subtracted from product k: the deviation itself, its square, and lagged products.
+    The deviation itself, its square, and lagged products: the products themselves where their law is exact, else what
+    is left of them beside the stated slope, x(t) x(t - lag) - slope x(t - lag)^2, whose law is hardly skewed.
     """
 
     first: int
@@ -80,11 +81,8 @@ class Pool:
     mean: NDArray  # of the window
     covariance: NDArray  # (lags, window): Cov(x(t), x(t - lag)), NaN where t - lag lies before the window
     exact: NDArray | None = None  # (1 + lags, window): eigenvalues of each average, where its law is exact
-
-    def statistics(self) -> list[str]:
-        return ["mean over steps"] + [
-            "variance over steps" if lag == 0 else "autocovariance over steps" for lag in self.lags
-        ]
+    slope: NDArray | None = None  # (lags, window): of x(t) on x(t - lag), where there is no exact law
+    square_sd: float | None = None  # standard deviation of a path's average square, where it is known
 
 
 class Marginal:
@@ -136,7 +134,9 @@ def plan_series(name: str, theory: Any, steps: int, grain: float, periods: Seque
     if not plan.unknown:
         _marginals(plan)
         if not plan.gaussian:
-            plan.product_sd = {(i, j): _product_sd(plan, i, j) for i, j in [*_diagonal(len(at)), *plan.pairs]}
+            plan.product_sd = {
+                (i, j): _product_sd(plan, i, j) for i, j in [*((i, i) for i in range(len(at))), *plan.pairs]
+            }
         plan.pool = _pool(plan, steps)
     return plan
 
@@ -151,10 +151,6 @@ def _marginals(plan: SeriesPlan) -> None:
             plan.scores[i] = Scores(Marginal(law, float(plan.mean[i]), float(np.sqrt(plan.variance[i]))))
 
 
-def _diagonal(count: int) -> list[tuple[int, int]]:
-    return [(i, i) for i in range(count)]
-
-
 def _product_sd(plan: SeriesPlan, i: int, j: int) -> float | None:
     """Standard deviation of the product of the deviations at two probes, from the covariance of their squares."""
     if plan.constant[i] or plan.constant[j] or not plan.highest > 4:
@@ -166,7 +162,7 @@ def _product_sd(plan: SeriesPlan, i: int, j: int) -> float | None:
     squares, known = plan.theory.autocovariance_of_squares(np.array([lag]), first), plan.covariance[i, j]
     if squares is None or known is None:
         return None
-    variance = float(squares[0]) + float(plan.variance[i] * plan.variance[j]) - float(known) ** 2
+    variance = float(squares[0]) + float(plan.variance[i] * plan.variance[j]) - known**2
     return float(np.sqrt(variance)) if variance > 0 else None
 
 
@@ -188,9 +184,25 @@ def _pool(plan: SeriesPlan, steps: int) -> Pool | None:
         return None
     rows[0] += _rounding(plan.grain)
     pool = Pool(first, steps, tuple(lags), mean, rows)
-    if plan.gaussian:
-        pool.exact = _eigenvalues(plan, window, tuple(lags))
+    pool.exact = _eigenvalues(plan, window, tuple(lags)) if plan.gaussian else None
+    if pool.exact is None:
+        pool.slope = np.zeros(rows.shape)
+        for slope, row, lag in zip(pool.slope, rows, lags, strict=True):
+            earlier = rows[0, : width - lag]
+            np.divide(row[lag:], earlier, out=slope[lag:], where=earlier > 0)
+        pool.square_sd = _square_sd(plan, first, width)
     return pool
+
+
+def _square_sd(plan: SeriesPlan, first: int, width: int) -> float | None:
+    """Of the average squared deviation over the window, for a series whose moments do not depend on the step."""
+    if not plan.theory.stationarity.covariance_stationary or not plan.highest > 4:
+        return None
+    squares = plan.theory.autocovariance_of_squares(np.arange(width), first)
+    if squares is None:
+        return None
+    variance = (width * squares[0] + 2 * float(np.sum((width - np.arange(1, width)) * squares[1:]))) / width**2
+    return float(np.sqrt(variance)) if variance > 0 else None
 
 
 def _rounding(grain: float) -> float:

@@ -6,7 +6,7 @@ Also: what the recovered shocks of two series must have in common.
 from __future__ import annotations
 
 from collections import OrderedDict
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
@@ -38,16 +38,19 @@ class Route:
         How they are recovered.
     source : object
         The primary source behind an undone series; None for innovations.
+
+    `scores` is None where the law of what comes out is not known: prediction errors of shocks that are not normal.
     """
 
     series: str
-    scores: Scores
+    scores: Scores | None
     words: str
     theory: Any
     graph: Any
     grain: float
     kalman: Kalman | None = None
     source: Any = None
+    stopped: str = ""  # why a tile could not be undone
     _means: OrderedDict[tuple[int, int], NDArray] = field(default_factory=OrderedDict, repr=False)
 
     def start(self, paths: int) -> Any:
@@ -64,9 +67,13 @@ class Route:
             x = x + self.grain * dither(first_path, x.shape[1], first_step, x.shape[0])
         if self.kalman is not None:
             return self.kalman.innovations(x - self._mean(first_step, len(x)), carrier, first_step)
-        with np.errstate(all="ignore"):
-            z = carrier.tile(x)
-        return (z if isinstance(z, np.ndarray) else np.full(x.shape, np.nan)), carrier
+        if carrier is not None:
+            with np.errstate(all="ignore"):
+                z = carrier.tile(x)
+            if isinstance(z, np.ndarray):
+                return z, carrier
+            self.stopped = z.reason
+        return np.full(x.shape, np.nan), None  # what could not be undone once is not taken up again
 
     def _mean(self, first: int, steps: int) -> NDArray:
         key = (first, steps)
@@ -102,7 +109,7 @@ def route(name: str, theory: Any, graph: Any, grain: float) -> Route | Cannot:
     if size <= (LARGEST_STATE if not undone else SMALL_STATE):
         return _by_filter(name, theory, graph, grain, system)
     if isinstance(undone, Unknown):
-        return Cannot(undone.reason)
+        return _by_projection(name, theory, graph, grain, undone.reason)
     words = f"recovered by undoing {name} down to {undone.source.name}"
     return Route(name, Scores(undone.source.law), words, theory, graph, grain, source=undone.source)
 
@@ -119,6 +126,17 @@ def _by_filter(name: str, theory: Any, graph: Any, grain: float, system: Any) ->
         return Cannot(f"values are rounded to {grain:g}, too coarse for shocks of sd {max(kalman.roots):.3g}")
     words = f"one-step prediction errors of {name} (Kalman filter)"
     return Route(name, Scores(LAWS["normal"]()), words, theory, graph, grain, kalman)
+
+
+def _by_projection(name: str, theory: Any, graph: Any, grain: float, reason: str) -> Route | Cannot:
+    """Prediction errors of a linear series whose shocks are not all normal."""
+    system = theory.system()
+    if system is None or system.noise_path is not None or not np.isfinite(system.noise).all():
+        return Cannot(reason)
+    if len(system.initial) > LARGEST_STATE:
+        return Cannot(f"{reason}; its state has {len(system.initial)} elements")
+    way = _by_filter(name, theory, graph, grain, system)
+    return way if isinstance(way, Cannot) else replace(way, scores=None)
 
 
 def _kalman(system: Any, row: int, rounding: float) -> Kalman:

@@ -87,7 +87,7 @@ def plan_of(spec: Any, steps: int | None = None) -> Plan:
         series.append(plan)
         routes[name] = way
         precision.append(Precision(name, declared.type, declared.decimals, bool(th[name].expression.sources)))
-    ways = [way for way in routes.values() if isinstance(way, Route)]
+    ways = [way for way in routes.values() if isinstance(way, Route) and way.scores is not None]
     pairs = {(a.series, b.series): expected(a, b, th.axis.space) for a, b in list(combinations(ways, 2))[:PAIR_LIMIT]}
     return Plan(steps, series, precision, plan_cross(series, th.cross), routes, pairs)
 
@@ -156,7 +156,14 @@ def _shocks(gather: Gather, name: str) -> Iterator[Check]:
     if isinstance(way, Cannot):
         yield Check(name, "recovered shocks", "all steps", "law", outcome="untestable", note=str(way))
         return
+    if name in gather.errors:
+        series = next(plan for plan in gather.plan.series if plan.name == name)
+        yield from gather.errors[name].checks(name, series.highest)
+        return
     sums = gather.shocks[name]
+    if way.stopped:
+        yield Check(name, "recovered shocks", "all steps", "law", outcome="untestable", note=way.stopped)
+        return
     noise = gather.noise.get(name, 0.0)
     if sums.n and noise > 0.1 * math.sqrt(2 / sums.n):
         note = f"stored rounding moves the shocks by {math.sqrt(noise):.2g} of their sd, too much for {sums.n} of them"
