@@ -6,6 +6,7 @@ from collections.abc import Callable, Mapping
 
 import numpy as np
 
+from procgen.chance import kernel
 from procgen.ensemble.columns import Column
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.plan import Block, lanes, tiles
@@ -14,12 +15,15 @@ from procgen.ensemble.source import Run, Source
 Tick = Callable[[int], None]  # called with the rows just drawn; may raise to stop the work
 State = dict[str, np.ndarray]
 
+COMPILING_REPAYS = 1_000_000  # narrow steps; each costs 1 to 7 µs in the interpreter, and compiling a second or two
+
 
 class Drawer:
     """Draws the blocks of one chain; keeps the run of each range of paths for the steps that follow."""
 
-    def __init__(self, source: Source, tick: Tick = lambda rows: None):
+    def __init__(self, source: Source, tick: Tick = lambda rows: None, narrow_steps: int = 0):
         self.source, self.tick = source, tick
+        self.compile = narrow_steps > COMPILING_REPAYS and kernel.available()
         self._runs: dict[tuple[int, int], Run] = {}
         self._states: dict[tuple[int, int], tuple[int, State]] = {}
 
@@ -28,9 +32,10 @@ class Drawer:
 
         Raises EnsembleError when a value is not finite, naming series, path and step.
         """
-        for block in lanes(batch):
-            rows = slice(block.first_path - batch.first_path, block.end_path - batch.first_path)
-            self._rows(block, {name: values[rows] for name, values in out.items()})
+        with kernel.compiling(self.compile):
+            for block in lanes(batch, self.source.depth):
+                rows = slice(block.first_path - batch.first_path, block.end_path - batch.first_path)
+                self._rows(block, {name: values[rows] for name, values in out.items()})
 
     def _rows(self, block: Block, out: Mapping[str, np.ndarray]) -> None:
         run, step = self._run(block), block.first_step

@@ -17,7 +17,7 @@ from procgen.ensemble.ensemble import Ensemble, Memory, OnDisk
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.manifest import Manifest, bytes_text
 from procgen.ensemble.part import Task, row_bytes
-from procgen.ensemble.plan import Block, Chain, batches, chains
+from procgen.ensemble.plan import Block, Chain, batches, chains, narrow_steps
 from procgen.ensemble.present import Present
 from procgen.ensemble.source import FACTORY, Source, open_source, remember, revealable
 from procgen.ensemble.store import MANIFEST, Folder
@@ -118,7 +118,7 @@ def _in_memory(source: Source, whole: Block, progress: Progress | None) -> Memor
             progress(done, whole.rows)
 
     values = empty(whole, source.columns)
-    drawer = Drawer(source, tick)
+    drawer = Drawer(source, tick, narrow_steps((whole,), row_bytes(source.columns), source.depth))
     for batch in batches(whole, row_bytes(source.columns)):
         rows = slice(batch.first_path - whole.first_path, batch.end_path - whole.first_path)
         span = slice(batch.first_step, batch.end_step)

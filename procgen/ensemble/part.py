@@ -17,7 +17,7 @@ from procgen.ensemble import digest
 from procgen.ensemble.columns import Column, store
 from procgen.ensemble.draw import Drawer, Tick, empty
 from procgen.ensemble.parquet import PartWriter
-from procgen.ensemble.plan import Block, Chain, batches
+from procgen.ensemble.plan import Block, Chain, batches, narrow_steps
 from procgen.ensemble.source import FACTORY, Source, open_source
 from procgen.ensemble.store import Folder
 
@@ -54,7 +54,7 @@ def render_chain(task: Task, tick: Tick = lambda rows: None) -> list[dict[str, A
     """Draw and write the parts of a chain from `task.start` on; their records for the manifest."""
     source = open_source(task.raw, task.reveal, task.factory)
     folder = Folder(Path(task.out))
-    drawer = Drawer(source, tick)
+    drawer = Drawer(source, tick, narrow_steps(task.chain, row_bytes(source.columns), source.depth))
     records = []
     for number in range(_take_up(task, folder, drawer), len(task.chain)):
         if number < task.start:

@@ -19,6 +19,7 @@ BUFFER_BYTES = 128 << 20
 GROUP_ROWS = 1 << 20
 TILE = 1 << 18
 BUSY_ROWS = 2_000_000  # below this many rows a second worker does not repay
+PAST = 1 << 22  # values before step 0 that are drawn at once, for each term that has them
 NARROW = 128  # paths below which row-wise recursions are mostly overhead
 
 
@@ -135,10 +136,26 @@ def batches(part: Block, row_bytes: int, longest: int | None = None) -> Iterator
     yield from cut(part, min(max(GROUP_ROWS, min(part.paths, NARROW) * steps), limit), steps)
 
 
-def lanes(batch: Block) -> Iterator[Block]:
-    """Pieces of a batch that one run draws: wide enough that short paths do not pay for many runs."""
+def lanes(batch: Block, depth: int = 0) -> Iterator[Block]:
+    """Pieces of a batch that one run draws: wide enough that short paths do not pay for many runs.
+
+    `depth` is the most steps before step 0 that the run must draw at once; the width keeps them in memory.
+    """
     width = min(max(_floor(TILE // batch.steps, CELL), CELL), 8 * CELL)
+    if depth:
+        width = max(min(width, PAST // depth), 1)
     yield from cut(batch, width * batch.steps)
+
+
+def narrow_steps(chain: Chain, row_bytes: int, depth: int = 0) -> int:
+    """Steps that a chain takes in runs so narrow that a recursion is mostly the interpreter's time."""
+    return sum(
+        block.steps
+        for part in chain
+        for batch in batches(part, row_bytes, chain[0].steps)
+        for block in lanes(batch, depth)
+        if block.paths <= 2 * NARROW
+    )
 
 
 def tiles(steps: int, paths: int, columns: int = 1) -> list[int]:

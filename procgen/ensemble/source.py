@@ -22,11 +22,15 @@ class Run(Protocol):
 
 
 class Source(Protocol):
-    """A spec ready to be drawn. `stamps(first_step, count)` is None when the spec has no start."""
+    """A spec ready to be drawn.
+
+    `stamps(first_step, count)` is None when the spec has no start; `depth` is how many steps before step 0 it draws.
+    """
 
     columns: list[Column]
     stamps: Any
     portable: tuple[bool, str]
+    depth: int
 
     def run(self, first_path: int, paths: int) -> Run: ...
 
@@ -48,6 +52,7 @@ class SpecSource:
         self.columns += [Column(name, revealed=True) for name in reveal]
         self.stamps = spec.time.stamps if spec.time.start is not None else None
         self.portable = self.graph.portable
+        self.depth = self.graph.depth
 
     def run(self, first_path: int, paths: int) -> Run:
         from procgen.terms.run import Run as SpecRun

@@ -47,6 +47,7 @@ class FakeSource:
         self.columns = [Column(name, **rest) for name, rest in raw["columns"].items()]
         self.stamps = None
         self.portable = (True, "")
+        self.depth = 0
 
     def run(self, first_path, paths):
         return FakeRun(self.raw, first_path, paths)

@@ -4,7 +4,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from procgen.ensemble import plan
-from procgen.ensemble.plan import CELL, LANES, STEPS, Block, batches, chains, cut, lanes, tiles
+from procgen.ensemble.plan import CELL, LANES, PAST, STEPS, Block, batches, chains, cut, lanes, narrow_steps, tiles
 
 shapes = st.builds(
     Block,
@@ -85,3 +85,17 @@ def test_the_usual_shape_is_cut_at_cells_and_keeps_all_workers_busy():
         assert len(plans) >= workers
         assert all(len(chain) == 1 and chain[0].first_path % CELL == 0 for chain in plans)
         assert len({chain[0].paths for chain in plans}) <= 2
+
+
+def test_a_long_past_is_drawn_for_fewer_paths_at_a_time():
+    whole = Block(0, 4096, 0, 10)
+    for depth in (0, 1000, 300_000, 10**9):
+        runs = list(lanes(whole, depth))
+        assert sum(run.paths for run in runs) == 4096
+        assert all(run.paths * depth <= PAST or run.paths == 1 for run in runs)
+
+
+def test_only_narrow_runs_repay_compiling():
+    assert narrow_steps((Block(0, 4096, 0, 1000),), 8) == 0
+    assert narrow_steps((Block(0, 1, 0, 2_000_000),), 8) == 2_000_000
+    assert narrow_steps((Block(0, 100, 0, 5000),), 8) == 5000
