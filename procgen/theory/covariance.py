@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from procgen.theory.arma import cross_covariance
-from procgen.theory.linear import At, Base, Linear, Sum, base_of
+from procgen.theory.linear import At, Base, Linear, Season, Sum, base_of
 from procgen.theory.sources import Space
 from procgen.theory.system import LARGEST_STATE, state_size, system_of
 from procgen.theory.weights import covariance_by_weights
@@ -83,7 +83,7 @@ def _by_base(form: Linear) -> dict[Base, tuple[dict[int, float], dict[int, float
     """For each base, the coefficients by delay and by frozen lag."""
     parts: dict[Base, tuple[dict[int, float], dict[int, float]]] = {}
     for key, c in form.items():
-        assert not isinstance(key, Sum)
+        assert not isinstance(key, Sum | Season)
         delays, frozen = parts.setdefault(key.base, ({}, {}))
         if isinstance(key, At):
             delays[key.delay] = c

@@ -69,14 +69,23 @@ class Expression:
             out = out + out.lag(lag) * -1.0
         return out
 
-    def integrate(self, start: float = 0.0) -> Expression:
-        """y(0) = start, y(t) = y(t-1) + x(t), followed backwards below 0."""
+    def integrate(self, start: float = 0.0, every: int = 1) -> Expression:
+        """y(t) = y(t - every) + x(t), `start` at the `every` steps up to step 0, followed backwards below them."""
+        if every > 1:
+            return self._integrate_seasons(start, every)
         terms = [(Term(summed=term), c) for term, c in self.terms.items()]
         linear, name = self.linear.integrate(), self.space.name
         for key in linear:
             if isinstance(key, Sum):
                 self.space.origins.setdefault(key, name)
         return Expression(self.space, self.mean_path.integrate(start, name), linear, _collect(terms))
+
+    def _integrate_seasons(self, start: float, every: int) -> Expression:
+        if self.terms or self.mean_path.value != 0.0:
+            raise Unknown("a seasonal sum of what has a mean, or is not linear, has no closed moments")
+        linear = self.linear.integrate_seasons(every)
+        self.space.origins.update(dict.fromkeys(linear, self.space.name))
+        return Expression(self.space, known.constant(start), linear)
 
     def exp(self) -> Expression:
         """The exponential of the series; opaque unless the series is linear."""

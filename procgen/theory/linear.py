@@ -4,7 +4,8 @@ A form is a sum of coefficients times *keys*:
 
     At(base, d)      the base process d steps ago,
     Frozen(base, j)  its value j steps before step 0, for ever,
-    Sum(key)         the running sum of a key from step 1 on: 0 at step 0, and followed backwards below it.
+    Sum(key)         the running sum of a key from step 1 on: 0 at step 0, and followed backwards below it,
+    Season(form, s)  the sum T(t) = T(t - s) + form(t) from step 1 on: 0 at the s steps up to step 0, likewise below.
 
 A base is an autoregression of one source, w = e / phi(B); a moving average is a form in delays of its base. Sums
 are only kept of a base itself: the sum of a delayed base and a delayed sum are rewritten by
@@ -13,7 +14,11 @@ are only kept of a base itself: the sum of a delayed base and a delayed sum are 
     sum of w(k - d), k = 1..t  =  Sum(w)(t) - [w(t) + ... + w(t - d + 1)] + [w(0) + ... + w(1 - d)]
 
 so that the difference of a walk *is* its increment, a difference summed again holds no sum at all, and
-what cancels leaves no key behind.
+what cancels leaves no key behind. A seasonal sum is of a form as it stands, kept at delays below s by
+
+    T(t - s) = T(t) - form(t)
+
+so that its seasonal difference is the form again.
 """
 
 from __future__ import annotations
@@ -54,12 +59,29 @@ class Sum(NamedTuple):
     tag: str = "sum"
 
 
-Key = At | Frozen | Sum
+class Season(NamedTuple):
+    of: Linear  # all of one base
+    every: int
+    delay: int = 0  # below `every`
+    tag: str = "season"
+
+
+Key = At | Frozen | Sum | Season
+
+
+def below(key: Key) -> Iterator[Key]:
+    """A key and all that it is a sum of, inner ones first."""
+    if isinstance(key, Sum):
+        yield from below(key.of)
+    elif isinstance(key, Season):
+        for inner in key.of:
+            yield from below(inner)
+    yield key
 
 
 def base_of(key: Key) -> Base:
-    while isinstance(key, Sum):
-        key = key.of
+    while isinstance(key, Sum | Season):
+        key = key.of if isinstance(key, Sum) else next(iter(key.of))
     return key.base
 
 
@@ -102,6 +124,8 @@ class Linear(Mapping[Key, float]):
         for key, c in self.items():
             if isinstance(key, At):
                 _add(total, At(key.base, key.delay + by), c)
+            elif isinstance(key, Season):
+                _add_form(total, _seasons_ago(key, by), c)
             else:
                 _add(total, key, c)
                 if isinstance(key, Sum):
@@ -128,6 +152,13 @@ class Linear(Mapping[Key, float]):
                     _add(total, Frozen(base, j), c)
         return Linear(total)
 
+    def integrate_seasons(self, every: int) -> Linear:
+        """The sum over steps `every` apart from step 1 on, split over the bases."""
+        parts: dict[Base, dict[Key, float]] = {}
+        for key, c in self.items():
+            parts.setdefault(base_of(key), {})[key] = c
+        return Linear({Season(Linear(part), every): 1.0 for part in parts.values()})
+
     def only(self, sources: Iterable[Source]) -> Linear:
         """The part that is driven by these sources."""
         chosen = set(sources)
@@ -141,11 +172,25 @@ class Linear(Mapping[Key, float]):
     @property
     def is_plain(self) -> bool:
         """No running sum and nothing that starts at step 0: covariances follow from autocovariances."""
-        return not any(isinstance(key, Sum) or base_of(key).started for key in self)
+        return not any(isinstance(key, Sum | Season) or base_of(key).started for key in self)
 
 
 def _add(total: dict[Key, float], key: Key, c: float) -> None:
     total[key] = total.get(key, 0.0) + c
+
+
+def _add_form(total: dict[Key, float], form: Linear, c: float) -> None:
+    for key, weight in form.items():
+        _add(total, key, c * weight)
+
+
+def _seasons_ago(key: Season, by: int) -> Linear:
+    """A seasonal sum `by` steps ago: whole seasons are taken off summand by summand."""
+    turns, delay = divmod(key.delay + by, key.every)
+    total: dict[Key, float] = {key._replace(delay=delay): 1.0}
+    for turn in range(turns):
+        _add_form(total, key.of.lag(delay + turn * key.every), -1.0)
+    return Linear(total)
 
 
 def _window(total: dict[Key, float], key: Key, by: int, order: int, scale: float) -> None:
@@ -157,6 +202,10 @@ def _window(total: dict[Key, float], key: Key, by: int, order: int, scale: float
     if isinstance(key, At):
         for j in range(by - order):
             _add(total, At(key.base, key.delay + j), scale * comb(by - 1 - j, order))
+        return
+    if isinstance(key, Season):
+        for j in range(by - order):
+            _add_form(total, _seasons_ago(key, j), scale * comb(by - 1 - j, order))
         return
     _add(total, key, scale * comb(by, order + 1))
     if isinstance(key, Sum):

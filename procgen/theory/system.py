@@ -2,9 +2,10 @@
 
     s(t) = A s(t-1) + B e(t),   y(t) = C s(t),   P(0) = Cov s(0)
 
-Its state holds the lags of each base, each running sum, and each value of step 0 that is remembered. Variances at a
-few steps come from doubling A and the sum of A^j Q A'^j (Smith 1968, SIAM J. Appl. Math. 16, 198-201), so that
-step 1e9 costs thirty products; at many steps from the responses C A^j B, added up as squares.
+Its state holds the lags of each base, each running sum, the last season of each seasonal sum, and each value of step
+0 that is remembered. Variances at a few steps come from doubling A and the sum of A^j Q A'^j (Smith 1968, SIAM J.
+Appl. Math. 16, 198-201), so that step 1e9 costs thirty products; at many steps from the responses C A^j B, added up
+as squares.
 """
 
 from __future__ import annotations
@@ -15,7 +16,7 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from procgen.theory.arma import companion, cross_covariance
-from procgen.theory.linear import At, Base, Frozen, Key, Linear, Sum, base_of
+from procgen.theory.linear import At, Base, Frozen, Key, Linear, Season, Sum, base_of, below
 from procgen.theory.sources import Source, Space
 from procgen.theory.unknown import Unknown
 
@@ -172,12 +173,13 @@ def system_of(space: Space, forms: Sequence[Linear]) -> System:
         transition[at : at + depth, at : at + depth] = companion(base.phi, depth)
         loading[at, sources.index(base.source)] = 1.0
     for key in layout.kept:
-        at = layout.place[key]
-        transition[at, at] = 1.0
-        if isinstance(key, Sum):  # its last value, plus what is summed at this step
-            inner = layout.place[key.of]
-            transition[at] += transition[inner]
-            loading[at] += loading[inner]
+        at, width = layout.place[key], _width(key)
+        transition[at : at + width, at : at + width] = np.roll(np.eye(width), 1, axis=0)
+        summed = key.of.items() if isinstance(key, Season) else [(key.of, 1.0)] if isinstance(key, Sum) else []
+        for part, c in summed:  # the value that it goes on from, plus what is summed at this step
+            inner = layout.index(part)
+            transition[at] += c * transition[inner]
+            loading[at] += c * loading[inner]
     observation = np.zeros((len(forms), n))
     for row, form in zip(observation, forms, strict=True):
         for key, c in form.items():
@@ -201,13 +203,11 @@ class _Layout:
     def __init__(self, forms: Sequence[Linear]):
         self.depth: dict[Base, int] = {}
         kept: dict[Key, None] = {}
-        for key in (key for form in forms for key in form):
+        for key in (part for form in forms for whole in form for part in below(whole)):
             base = base_of(key)
             self.depth[base] = max(self.depth.get(base, 1), len(base.phi), _reach(key))
-            chain = [key]
-            while isinstance(chain[-1], Sum):
-                chain.append(chain[-1].of)
-            kept |= dict.fromkeys(k for k in reversed(chain) if not isinstance(k, At))
+            if not isinstance(key, At):
+                kept[_newest(key)] = None
         self.kept = list(kept)
         self.place: dict[Key, int] = {}
         self.size = 0
@@ -216,16 +216,23 @@ class _Layout:
             self.size += depth
         for key in self.kept:
             self.place[key] = self.size
-            self.size += 1
+            self.size += _width(key)
 
     def index(self, key: Key) -> int:
-        return self.place[At(key.base, 0)] + key.delay if isinstance(key, At) else self.place[key]
+        return self.place[_newest(key)] + (key.delay if isinstance(key, At | Season) else 0)
+
+
+def _newest(key: Key) -> Key:
+    return key._replace(delay=0) if isinstance(key, At | Season) else key
+
+
+def _width(key: Key) -> int:
+    """How many elements of the state a sum or a frozen value takes."""
+    return key.every if isinstance(key, Season) else 1
 
 
 def _reach(key: Key) -> int:
-    while isinstance(key, Sum):
-        key = key.of
-    return (key.delay if isinstance(key, At) else key.back) + 1
+    return 1 + (key.delay if isinstance(key, At) else key.back if isinstance(key, Frozen) else 0)
 
 
 def _initial(space: Space, layout: _Layout, sources: list[Source]) -> np.ndarray:
@@ -240,7 +247,7 @@ def _initial(space: Space, layout: _Layout, sources: list[Source]) -> np.ndarray
             lags[q : q + block.shape[1], p : p + len(block)] = block.T
     copy = np.eye(layout.size)
     for key in layout.kept:
-        copy[layout.place[key]] = 0.0
+        copy[layout.place[key] : layout.place[key] + _width(key)] = 0.0
         if isinstance(key, Frozen):
             copy[layout.place[key], layout.place[At(key.base, 0)] + key.back] = 1.0
     return copy @ lags @ copy.T

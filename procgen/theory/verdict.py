@@ -19,7 +19,7 @@ import numpy as np
 from procgen.theory.arma import spectral_radius
 from procgen.theory.expression import Expression
 from procgen.theory.known import Known
-from procgen.theory.linear import At, Frozen, Key, Linear, Sum, base_of
+from procgen.theory.linear import At, Frozen, Key, Linear, Season, Sum, base_of
 from procgen.theory.monomials import Term
 from procgen.theory.sources import GARCH, OPAQUE, SQUARES, Source, Space
 
@@ -116,6 +116,8 @@ def _form(findings: _Findings, form: Linear) -> None:
     for key in form:
         if isinstance(key, Sum):
             findings.say(GROWS, f"unit root in {_origin(findings.space, key)}")
+        elif isinstance(key, Season):
+            findings.say(GROWS, f"seasonal unit roots in {_origin(findings.space, key._replace(delay=0))}")
         elif base_of(key).started:
             _started(findings, key)
     for source in form.sources:
@@ -181,7 +183,7 @@ def _frozen(findings: _Findings, x: Expression) -> None:
 
 
 def _has_sum(forms: Iterable[Linear]) -> bool:
-    return any(isinstance(key, Sum) for form in forms for key in form)
+    return any(isinstance(key, Sum | Season) for form in forms for key in form)
 
 
 def _origin(space: Space, key: Key) -> str:

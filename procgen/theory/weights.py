@@ -12,7 +12,7 @@ from math import comb
 import numpy as np
 
 from procgen.theory.arma import PowerSeries, cross_covariance
-from procgen.theory.linear import At, Base, Key, Linear, Sum, base_of
+from procgen.theory.linear import At, Base, Frozen, Key, Linear, Season, Sum, base_of, below
 from procgen.theory.sources import Space
 from procgen.theory.unknown import Unknown
 
@@ -65,6 +65,8 @@ def _weights(form: Linear, step: int, top: int, count: int) -> np.ndarray:
     for key, c in form.items():
         if isinstance(key, At):
             delays.setdefault(key.base, {})[key.delay] = c
+        elif any(isinstance(part, Season) for part in below(key)):
+            total += c * _seasonal_weights(key, step, top, count)
         else:
             response = PowerSeries(np.ones(1), base_of(key).phi).upto(count + step + 1)
             total += c * _before_step_0(base_of(key), _kept_weights(key, response, step, top, count), top)
@@ -83,12 +85,22 @@ def _before_step_0(base: Base, weights: np.ndarray, top: int) -> np.ndarray:
     return weights
 
 
+def _seasonal_weights(key: Key, step: int, top: int, count: int) -> np.ndarray:
+    """Weights of a seasonal sum, or of a running sum of one, summand by summand."""
+    if isinstance(key, Season):
+        summed, steps = key.of, range(step - key.delay, 0, -key.every)
+    else:
+        assert isinstance(key, Sum)
+        summed, steps = Linear({key.of: 1.0}), range(1, step + 1)
+    return sum((_weights(summed, at, top, count) for at in steps), np.zeros(count))
+
+
 def _kept_weights(key: Key, response: np.ndarray, step: int, top: int, count: int) -> np.ndarray:
     """Weights of a running sum or a frozen value whose base has this response."""
     order = 0
     while isinstance(key, Sum):
         key, order = key.of, order + 1
-    if not isinstance(key, At):  # a frozen value, summed `order` times
+    if isinstance(key, Frozen):  # summed `order` times
         return _times_chosen(step, order) * _shifted(response, -key.back - top, count)
     sums = [response]
     for _ in range(order):
@@ -112,13 +124,8 @@ def _shifted(values: np.ndarray, first: int, count: int) -> np.ndarray:
 
 def _depth(form: Linear) -> int:
     """How many shocks before the oldest step matter to a form."""
-    return max(_base_depth(base_of(key)) + (key.delay if isinstance(key, At) else _back(key)) for key in form)
-
-
-def _back(key: Key) -> int:
-    while isinstance(key, Sum):
-        key = key.of
-    return 0 if isinstance(key, At) else key.back
+    ends = [part for key in form for part in below(key) if isinstance(part, At | Frozen)]
+    return max(_base_depth(end.base) + (end.delay if isinstance(end, At) else end.back) for end in ends)
 
 
 def _base_depth(base: Base) -> int:
