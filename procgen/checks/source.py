@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import copy
 from collections.abc import Iterator, Mapping
 from pathlib import Path
 from typing import Any, Protocol
@@ -19,6 +20,7 @@ class Origin(Protocol):
     steps: int
     rows: int
     faults: list[Check]
+    columns: dict[str, str]  # series of `spec` -> the name that the reader knows
 
     def blocks(self) -> Iterator[tuple[int, int, Mapping[str, np.ndarray]]]: ...
     def checks(self) -> list[Check]: ...
@@ -69,7 +71,7 @@ class EnsembleOrigin:
         missing = [name for name in self.spec.series if name not in ensemble.names]
         if missing:
             raise TableError(f"the ensemble has no series {', '.join(missing)}; it has {', '.join(ensemble.names)}")
-        self.names = list(self.spec.series)
+        self.spec, self.columns = with_revealed(self.spec, [c.name for c in ensemble.columns if c.revealed])
         self._nodes: list[tuple[Any, dict[str, Any]]] = []
 
     def checks(self) -> list[Check]:
@@ -92,7 +94,7 @@ class EnsembleOrigin:
         manifest = getattr(self.ensemble, "manifest", None)
         if manifest is None:
             for first_path, first_step, values in self.ensemble.blocks():
-                yield first_path, first_step, {name: values[name] for name in self.names}
+                yield first_path, first_step, {name: values[column] for name, column in self.columns.items()}
             return
         chains: dict[tuple[int, int], list[Any]] = {}
         for part in manifest.parts:
@@ -118,7 +120,8 @@ class EnsembleOrigin:
         from procgen.ensemble.columns import as_float
 
         leaves = {name: digest.Leaves(part.block) for name in self.ensemble.names}
-        out = {name: np.empty((part.block.paths, part.block.steps)) for name in self.names}
+        wanted = set(self.columns.values())
+        out = {column: np.empty((part.block.paths, part.block.steps)) for column in wanted}
         left = part.block.rows
         while left:
             block, values = next(pieces)
@@ -132,7 +135,7 @@ class EnsembleOrigin:
                     out[name][rows, steps] = numbers
         whole = self.ensemble.manifest.whole
         self._nodes.append((part, {name: leaf.nodes(whole) for name, leaf in leaves.items()}))
-        return out
+        return {name: out[column] for name, column in self.columns.items()}
 
     def _compare_digests(self, manifest: Any) -> None:
         """Every value is the one that was written, or the first place where it is not."""
@@ -159,3 +162,26 @@ class EnsembleOrigin:
         for k, damage in enumerate(damages[:3]):
             series = getattr(damage, "series", None) or (result.difference.series if result.difference else "")
             self.faults.append(Check.fact(series, "digest", "all parts", str(damage) + (first if k == 0 else "")))
+
+
+def with_revealed(spec: Any, revealed: list[str]) -> tuple[Any, dict[str, str]]:
+    """The spec with every revealed term as a series of its own, and the column behind each series.
+
+    A revealed term is then checked like any series: its shocks can be recovered where those of its sum cannot.
+    """
+    columns = {name: name for name in spec.series}
+    if not revealed:
+        return spec, columns
+    from procgen.ensemble.source import read_spec
+    from procgen.spec.model import SpecError
+
+    raw = copy.deepcopy(dict(spec.raw))
+    for column in revealed:
+        name = column.replace(".", "__")
+        raw["series"][name] = [{"use": column}]
+        try:
+            spec = read_spec(raw)
+            columns[name] = column
+        except SpecError:  # revealed under a name that no `use:` can take, such as the `use` itself
+            del raw["series"][name]
+    return spec, columns

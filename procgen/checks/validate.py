@@ -55,7 +55,10 @@ def validate(
         raise ValueError(f"expected a false-alarm probability between 0 and 1, got {false_alarm}")
     origin = source.origin(data, spec, columns)
     gather = gathered(plan_of(origin.spec, origin.steps), origin.blocks(), progress, origin.rows)
-    return Verdict([*origin.checks(), *origin.faults, *judged(gather)], false_alarm, origin.about())
+    rows = [*origin.checks(), *origin.faults, *judged(gather)]
+    for row in rows:
+        row.series = " ~ ".join(origin.columns.get(name, name) for name in row.series.split(" ~ "))
+    return Verdict(rows, false_alarm, origin.about())
 
 
 def gathered(plan: Plan, blocks: Blocks, progress: Tick | None = None, rows: int = 0) -> Gather:

@@ -92,3 +92,24 @@ def test_false_alarm_must_be_a_probability(out):
         validate(out, false_alarm=2)
     with pytest.raises(ValueError, match="expected an ensemble, a DataFrame, or the path of one, got int"):
         validate(3)
+
+
+def test_revealed_terms_are_checked_as_series(tmp_path):
+    # The sum of an AR and a garch has no shocks of its own to recover; its parts have, once they are revealed.
+    raw = {
+        "procgen": 1,
+        "seed": 4,
+        "paths": 300,
+        "time": {"steps": 300},
+        "series": {
+            "x": [{"ar": {"phi": 0.9, "sd": 1}}, {"garch": {"sd": 1, "alpha": 0.1, "beta": 0.8}, "as": "noise"}]
+        },
+    }
+    stated = read_spec(raw)
+    assert validate(render(stated, out=tmp_path / "a", reveal="all")).agrees is True
+    raw["series"]["x"][1] = {"white_noise": {"sd": 1}, "as": "noise"}
+    drawn = render(read_spec(raw), out=tmp_path / "b", reveal="all")
+    assert validate(render(read_spec(raw)), stated).agrees is True  # too little to see in the sum alone
+    verdict = validate(drawn, stated)
+    assert verdict.agrees is False
+    assert verdict.headline[0].startswith("x.noise: clustering")
