@@ -86,7 +86,9 @@ class Gather:
         self.noise: dict[str, float] = {}  # series -> variance that rounding adds to a recovered shock
         self.routes = {name: way for name, way in plan.routes.items() if isinstance(way, Route)}
         scores = {name: way.scores for name, way in self.routes.items() if way.scores is not None}
-        self.shocks = {s.name: ShockSums(scores[s.name], plan.steps, _lags(s)) for s in plan.series if s.name in scores}
+        self.shocks = {
+            s.name: ShockSums(scores[s.name], plan.steps, _lags(s), s.period) for s in plan.series if s.name in scores
+        }
         self.errors = {name: ErrorSums() for name in self.routes if name not in scores}
         self.cross = {pair: CrossSums() for pair in plan.shock_pairs}
 

@@ -60,11 +60,14 @@ class ShockSums:
         Steps of the whole series, for the profile along steps.
     lags : sequence of int
         Lags at which the memory of the scores is summed.
+    period : int, optional
+        Steps after which the series' season repeats.
     """
 
     scores: Scores
     steps: int
     lags: tuple[int, ...] = MEMORY_LAGS
+    period: int | None = None
     n: int = 0
     sums: NDArray = field(default_factory=lambda: np.zeros(2))  # sums of z and z²
     counts: NDArray = field(default_factory=lambda: np.zeros(BINS, dtype=np.int64))

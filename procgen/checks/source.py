@@ -104,38 +104,44 @@ class EnsembleOrigin:
         self._compare_digests(manifest)
 
     def _chain(self, first: int, end: int, parts: list[Any]) -> Iterator[tuple[int, int, Mapping[str, np.ndarray]]]:
-        """The parts of one range of paths, each gathered whole before it is handed on."""
+        """The parts of one range of paths; one that cannot be read becomes a fault."""
         from procgen.ensemble.errors import EnsembleError
 
         pieces = self.ensemble.stored(first, end)
-        for part in parts:
-            try:
-                yield part.block.first_path, part.block.first_step, self._part(part, pieces)
-            except EnsembleError as error:
-                self.faults.append(Check.fact("", "rows in order", str(part.block), str(error)))
-                return
+        part = parts[0]
+        try:
+            for part in parts:
+                # Parts that follow each other must be cut at the same paths, hence each is handed on whole.
+                yield from self._pieces(part, pieces) if len(parts) == 1 else [self._whole(part, pieces)]
+            next(pieces, None)  # what comes after the last row is looked at, too
+        except EnsembleError as error:
+            self.faults.append(Check.fact("", "rows in order", str(part.block), str(error)))
 
-    def _part(self, part: Any, pieces: Iterator[Any]) -> dict[str, np.ndarray]:
+    def _pieces(self, part: Any, pieces: Iterator[Any]) -> Iterator[tuple[int, int, Mapping[str, np.ndarray]]]:
+        """The pieces of a part as they are stored; its digest is made on the way."""
         from procgen.ensemble import digest
         from procgen.ensemble.columns import as_float
 
         leaves = {name: digest.Leaves(part.block) for name in self.ensemble.names}
-        wanted = set(self.columns.values())
-        out = {column: np.empty((part.block.paths, part.block.steps)) for column in wanted}
         left = part.block.rows
         while left:
             block, values = next(pieces)
             left -= block.rows
-            rows = slice(block.first_path - part.block.first_path, block.end_path - part.block.first_path)
-            steps = slice(block.first_step - part.block.first_step, block.end_step - part.block.first_step)
+            numbers = {name: as_float(values[name]) for name in leaves}
             for name, leaf in leaves.items():
-                numbers = as_float(values[name])
-                leaf.add(block.first_path, block.first_step, numbers)
-                if name in out:
-                    out[name][rows, steps] = numbers
+                leaf.add(block.first_path, block.first_step, numbers[name])
+            yield block.first_path, block.first_step, {name: numbers[column] for name, column in self.columns.items()}
         whole = self.ensemble.manifest.whole
         self._nodes.append((part, {name: leaf.nodes(whole) for name, leaf in leaves.items()}))
-        return {name: out[column] for name, column in self.columns.items()}
+
+    def _whole(self, part: Any, pieces: Iterator[Any]) -> tuple[int, int, Mapping[str, np.ndarray]]:
+        block = part.block
+        out = {name: np.empty((block.paths, block.steps)) for name in self.columns}
+        for first_path, first_step, values in self._pieces(part, pieces):
+            for name, numbers in values.items():
+                path, step = first_path - block.first_path, first_step - block.first_step
+                out[name][path : path + len(numbers), step : step + numbers.shape[1]] = numbers
+        return block.first_path, block.first_step, out
 
     def _compare_digests(self, manifest: Any) -> None:
         """Every value is the one that was written, or the first place where it is not."""

@@ -94,6 +94,9 @@ _IN_WORDS = {
     "shocks: clustering": "a correlation of {} between the sizes of shocks of one path",
     "shocks: neighbouring paths": "a correlation of {} between shocks of neighbouring paths",
     "shocks: correlation between series": "a correlation between series' shocks off by {}",
+    "prediction errors: mean": "a shift of all one-step errors by {} of their sd",
+    "prediction errors: variance": "a variance of one-step errors off by a factor of 1 ± {}",
+    "prediction errors: autocorrelation": "a correlation of {} between one-step errors",
     "mean": "a mean off by {}",
     "variance": "a variance off by {}",
     "covariance": "a covariance off by {}",
@@ -108,8 +111,8 @@ def _detectable(rows: Sequence[Check]) -> Iterator[str]:
             mine = found.setdefault(row.series, {})
             mine[row.what] = min(mine.get(row.what, math.inf), row.detectable)
     for series, sizes in found.items():
-        if any(what.startswith("shocks") for what in sizes):
-            sizes = {what: size for what, size in sizes.items() if what.startswith("shocks")}
+        sharp = {what: size for what, size in sizes.items() if what.startswith(("shocks", "prediction"))}
+        sizes = sharp or sizes
         text = "; ".join(_IN_WORDS[what].format(number(size, 2)) for what, size in sizes.items())
         yield f"{series}: {text}"
 

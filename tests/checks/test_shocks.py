@@ -47,6 +47,20 @@ def test_merged_sums_are_the_sums_of_both():
             assert checks_of(left)[name].log_p == pytest.approx(check.log_p, rel=1e-9), name
 
 
+def test_a_seasonal_profile_is_found_at_its_phase():
+    z = np.random.default_rng(6).standard_normal((240, 50))
+    moved = z + 0.15 * np.cos(2 * np.pi * np.arange(240) / 12)[:, None]
+    found = []
+    for values in (z, moved):
+        sums, lane = ShockSums(SCORES[NORMAL], 240, period=12), ShockLane.start(50)
+        sums.absorb(values, 0, lane)
+        sums.finish(lane)
+        found.append(checks_of(sums))
+    name = "shocks: level by phase period 12"
+    assert found[0][name].log_p > math.log(1e-3)
+    assert found[1][name].log_p < found[1]["shocks: level by step sum over steps"].log_p < math.log(1e-6)
+
+
 def test_unknown_first_steps_and_broken_paths_are_left_out():
     z = np.random.default_rng(3).standard_normal((100, 6))
     spoiled = np.vstack([np.full((3, 6), np.nan), z])
