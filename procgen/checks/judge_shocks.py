@@ -154,16 +154,16 @@ def _by_step(series: str, sums: ShockSums) -> Iterator[Check]:
         )
         yield Check.of(series, f"shocks: {what} by step", *_worst_step(sums, z, kind))
     if sums.period and sums.width == 1 and sums.period < count.size:
-        yield _season(series, sums)
+        yield _season(series, sums, sums.period)
 
 
-def _season(series: str, sums: ShockSums) -> Check:
+def _season(series: str, sums: ShockSums, period: int) -> Check:
     """The level at each phase of the season."""
-    phase = np.arange(sums.profile.shape[1]) % sums.period
+    phase = np.arange(sums.profile.shape[1]) % period
     count, total = (np.bincount(phase, weights=row) for row in sums.profile[:2])
     z = total[count > 0] / np.sqrt(count[count > 0])
     finding = judge.squares(float(z @ z), z.size, sums.n)
-    return Check.of(series, "shocks: level by phase", f"period {sums.period}", "level", finding)
+    return Check.of(series, "shocks: level by phase", f"period {period}", "level", finding)
 
 
 def _worst_step(sums: ShockSums, z: NDArray, kind: str) -> tuple[str, str, Finding]:

@@ -129,6 +129,10 @@ def judged(gather: Gather) -> Iterator[Check]:
         yield from _shocks(gather, series.name)
     for place in range(len(plan.cross)):
         yield from cross_moments(gather, place)
+    pairs = math.comb(len(plan.series), 2)
+    if pairs > len(plan.cross):
+        note = f"{len(plan.cross)} of the {pairs} pairs of series are compared, the first ones of the spec"
+        yield Check("", "pairs of series", "", "dependence", outcome="reported", note=note)
     for pair, sums in gather.cross.items():
         name, stated = " ~ ".join(pair), plan.shock_pairs[pair]
         if stated.unknown:

@@ -112,3 +112,11 @@ def test_memory_does_not_grow_with_paths(plan, values):
     assert not gather.lanes
     assert gather.moments.scatter.shape == (plan.offset[-1], plan.offset[-1])
     assert sum(rows.nbytes for _, rows in gather.structure.prints) == 10 * PATHS * 3 * 8
+
+
+def test_pairs_that_are_left_out_are_said():
+    body = {"series": {f"s{k}": [{"white_noise": {"sd": 1}}] for k in range(10)}}
+    spec = spec_of(body, 20, 12, 1)
+    found = list(judged(gathered(plan_of(spec), [(0, 0, draw(spec))])))
+    notes = [check.note for check in found if check.what == "pairs of series"]
+    assert notes == ["36 of the 45 pairs of series are compared, the first ones of the spec"]
