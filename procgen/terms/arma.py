@@ -85,11 +85,7 @@ class Arma(Term):
             if values.get("total_sd") is not None:
                 yield "total_sd", "a term that leaves from `before` has no stationary spread; give `sd`"
         elif partial_autocorrelations(phi) is None:
-            yield (
-                "phi",
-                f"expected all roots of 1 − φ₁z − … outside the unit circle, got one at {_root(phi)}; shrink phi, "
-                "or put the term without that root inside `integrate`, or give `before` to run it on purpose",
-            )
+            yield "phi", not_causal(phi, "put the term without that root inside `integrate`")
 
     def __init__(self, values):
         super().__init__({"phi": (), "theta": (), **values})
@@ -220,6 +216,14 @@ def _buffer(past, like):
     out = np.empty((len(past) + len(like), max(like.shape[1], past.shape[1] if len(past) else 1)))
     out[: len(past)] = past
     return out
+
+
+def not_causal(phi, instead):
+    """What to say of an autoregression without a causal stationary solution."""
+    return (
+        f"expected all roots of 1 − φ₁z − … outside the unit circle, got one at {_root(phi)}; shrink phi, "
+        f"or {instead}, or give `before` to run it on purpose"
+    )
 
 
 def _root(phi):

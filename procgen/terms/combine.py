@@ -162,6 +162,9 @@ class Hidden(Term):
     def __init__(self, output):
         super().__init__({"output": output})
 
+    def reach(self, head):
+        return (head,)
+
     def moments(self, axis, body):
         return body.hidden(self.output)
 

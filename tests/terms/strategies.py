@@ -106,6 +106,11 @@ def walking(values: dict, x: float) -> dict:
     return {name: value for name, value in values.items() if name != "total_sd"} | {"sd": x}
 
 
+def turning(values: dict, x: float) -> dict:
+    """One spread, and a period that is not aliased."""
+    return walking(values, x) | {"rho": x, "period": 2.5 + values["period"]}
+
+
 def clustering(values: dict, x: float) -> dict:
     """A variance: alpha and beta scaled to a persistence below 1, and one spread."""
     total = sum(values["alpha"]) + sum(values.get("beta", []))
@@ -132,9 +137,26 @@ def bending(values: dict, x: float) -> dict:
     return values | ({"bends": bends} if bends else {})
 
 
+def integrated(values: dict, x: float) -> dict:
+    """A whole season, one start for all, and a past that is long enough or none."""
+    season = values.get("seasonal")
+    if season is not None:
+        season["period"] = 2 + season["period"] % 3
+    if isinstance(values.get("period"), int):
+        values["period"] = 2 + values["period"] % 5
+    for name in ("start", "before"):
+        if name in values:
+            values[name] = 0.0 if name == "start" else {"x": [0.5] * 60, "shocks": [0.2] * 30}
+    if "before" in values and "d" not in values:
+        values["before"].pop("shocks")
+    return walking(values, x)
+
+
 MEND = {
     **dict.fromkeys(("ar", "ma", "arma"), driven),
     "random_walk": walking,
+    **dict.fromkeys(("arima", "seasonal_random_walk", "ornstein_uhlenbeck"), integrated),
+    "stochastic_cycle": turning,
     **dict.fromkeys(("garch", "arch"), clustering),
     "seasonal": repeating,
     "trend": bending,
