@@ -122,7 +122,7 @@ class Verdict:
     def agrees(self) -> bool | None:
         if self.counts.get("departs"):
             return False
-        return True if any(row.outcome == "agrees" and row.log_p is not None for row in self.rows) else None
+        return True if any(row.outcome == "agrees" and row.kind != "structure" for row in self.rows) else None
 
     @property
     def verdict(self) -> str:

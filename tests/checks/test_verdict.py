@@ -65,6 +65,8 @@ def test_nothing_judged_is_no_agreement():
     assert verdict.verdict == "untestable"
     facts_alone = Verdict([Check.fact("x", "finite values", "all steps", "")], 0.001)
     assert facts_alone.agrees is None
+    known = Check("x", "values", "all steps", "level", outcome="agrees")  # a series without chance that is its mean
+    assert Verdict([known], 0.001).agrees is True
 
 
 def test_what_cannot_be_trusted_leaves_the_family():
