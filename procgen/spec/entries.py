@@ -115,8 +115,7 @@ class _Terms:
         if len(self.reader.faults) == before and INVALID not in values.values():
             self._check(values, inner, "shock" in given)
         places |= {name: value.place for name, value in given.items()}
-        bodies = {p.name: values.pop(p.name) for p in self.kind.parameters if isinstance(p.domain, Body)}
-        bodies = {name: body for name, body in bodies.items() if isinstance(body, tuple)}
+        bodies = self._bodies(values)
         return Entry(
             self.kind.kind,
             self.label,
@@ -127,6 +126,17 @@ class _Terms:
             tree.place,
             Frozen(places),
         )
+
+    def _bodies(self, values: dict[str, Any]) -> dict[str, tuple[Entry, ...]]:
+        """Take the bodies out of the values, in order; of named ones (branches.calm) the names stay as a value."""
+        bodies = {}
+        for p in self.kind.parameters:
+            if isinstance(p.domain, Body):
+                bodies[p.name] = values.pop(p.name)
+            elif isinstance(getattr(p.domain, "each", None), Body) and isinstance(values[p.name], Mapping):
+                bodies |= {f"{p.name}.{name}": body for name, body in values[p.name].items()}
+                values[p.name] = tuple(values[p.name])
+        return {name: body for name, body in bodies.items() if isinstance(body, tuple)}
 
     def _long_form(self, tree: Tree) -> Tree:
         """Return the mapping that a short form stands for: a body alone, or the one parameter alone."""

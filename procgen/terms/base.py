@@ -118,6 +118,10 @@ class Term:
         """The primary streams that the term needs, in the order in which ``recurse`` receives them."""
         return ()
 
+    def misfit(self, inputs: Sequence[Any]) -> str | None:
+        """What is wrong with the nodes that it would read, in a sentence; None when they fit."""
+        return None
+
     def equation(self, *inputs: str) -> str:
         """The term in the usual notation, with its numbers."""
         raise NotImplementedError

@@ -171,6 +171,9 @@ class Graph:
             inputs.append(noise)
         inputs += [self._source(draw, owner, entry.label, name) for draw in term.draws()]
         node = self._node(term, name, inputs, entry.place)
+        misfit = term.misfit(inputs)
+        if misfit:
+            raise SpecError((Fault(entry.place, misfit),))
         if kind.takes_shock:
             self.filters[id(inputs[-1])] = node
         return node
