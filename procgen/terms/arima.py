@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import ClassVar
 
 import numpy as np
@@ -22,6 +23,9 @@ def accumulate(delta, back, w, x):
         for i in range(delta.shape[0]):
             v = v + delta[i] * x[t + n - back[i]]
         x[t + n] = v
+
+
+SHOCK_SD = replace(SD, per=None, no_per="the coefficients beside it belong to the length of a step")
 
 
 class Integrated(Term):
@@ -166,11 +170,11 @@ class Arima(Integrated):
             "start",
             "x₀",
             Reals(),
-            "the d + s·D values up to step 0, oldest first, the last one at step 0; one number stands for all",
-            default=(0.0,),
+            "the d + s·D values up to step 0, oldest first, the last at step 0; one stands for all, 0 when absent",
+            default=None,
             unit="series",
         ),
-        SD,
+        SHOCK_SD,
         LAW,
         Parameter(
             "before",
@@ -219,7 +223,7 @@ class Arima(Integrated):
         phi, theta, self.delta = self._parts(values)
         self.core = Arma({"phi": phi, "theta": theta, "sd": 1.0, "total_sd": None, "before": None})
         self.level = float(self.drift)
-        self.known = self.start if len(self.start) == len(self.delta) else self.start[:1] * len(self.delta)
+        self.known = filled(self.start, len(self.delta))
 
     @property
     def period(self):
@@ -276,7 +280,7 @@ LONGEST = 1_000  # steps of a season
 
 def _lengths(values, p, q, n):
     """Faults of `start` and `before` that are too short."""
-    if len(values["start"]) not in (1, n):
+    if values["start"] is not None and len(values["start"]) not in (1, n):
         yield (
             "start",
             f"expected {n} values up to step 0 (d + s·D of them) or one for all, got {len(values['start'])}",
@@ -286,6 +290,12 @@ def _lengths(values, p, q, n):
         yield "before", f"expected {p + n} past values in `x` (one a lag of the recursion), got {len(before['x'])}"
     if before is not None and len(before["shocks"]) < q:
         yield "before", f"expected {q} past `shocks` (one a lag of theta), got {len(before['shocks'])}"
+
+
+def filled(start, count):
+    """Starting values, where none stand for zeros and one for all."""
+    start = start or (0.0,)
+    return start if len(start) == count else start[:1] * count
 
 
 def _ar(phi):

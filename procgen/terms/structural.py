@@ -13,9 +13,9 @@ import numpy as np
 
 from procgen.chance.laws import Normal
 from procgen.spec.declare import REQUIRED, Choice, Parameter, Real, Reals, Record, Span
-from procgen.terms.arima import LONGEST, Integrated
+from procgen.terms.arima import LONGEST, SHOCK_SD, Integrated, filled
 from procgen.terms.arma import Arma
-from procgen.terms.base import LAW, SD, Ahead, Draw, Term, number
+from procgen.terms.base import LAW, Ahead, Draw, Term, number
 from procgen.terms.walk import accumulate
 
 NORMAL = Normal()
@@ -180,7 +180,7 @@ class LocalLinearTrend(LocalLevel):
 class SeasonalRandomWalk(Integrated):
     kind = "seasonal_random_walk"
     family = "linear"
-    purpose = "a seasonal pattern that drifts: each value is the one a season ago and a shock, or sums over seasons are"
+    purpose = "a seasonal pattern that drifts: the value of a season ago plus a shock; or seasons sum to shocks"
     source = "Harvey (1989), sec. 2.3.4 for the dummy form; Box & Jenkins (1970), ch. 9"
     example = "seasonal_random_walk: {period: 4, sd: 0.3, start: [5, -2, -4, 1]}"
     knows = "mean and covariance at any steps; Gaussian law for normal shocks"
@@ -197,11 +197,11 @@ class SeasonalRandomWalk(Integrated):
             "start",
             "x₀",
             Reals(),
-            "the pattern at steps 0 … s − 1 that no shock gives; its first value is the one at step 0",
-            default=(0.0,),
+            "the pattern at steps 0 … s − 1 that no shock gives, its first value at step 0; 0 when absent",
+            default=None,
             unit="series",
         ),
-        SD,
+        SHOCK_SD,
         LAW,
         Parameter(
             "before",
@@ -214,7 +214,7 @@ class SeasonalRandomWalk(Integrated):
 
     @classmethod
     def check(cls, values):
-        period, start, before = values["period"], values["start"], values["before"]
+        period, start, before = values["period"], values["start"] or (0.0,), values["before"]
         if not (period.is_integer() and 2 <= period <= LONGEST):
             yield "period", f"expected a whole number of steps from 2 to {LONGEST:,}, got {number(period)}"
             return
@@ -230,7 +230,7 @@ class SeasonalRandomWalk(Integrated):
         super().__init__(values)
         self.season = int(self.period)
         self.core = Arma({"sd": 1.0, "total_sd": None, "before": None})
-        pattern = self.start if len(self.start) == self.season else self.start[:1] * self.season
+        pattern = filled(self.start, self.season)
         self.pattern = np.array(pattern)
         if self.form == "walk":
             self.delta, self.known = (0.0,) * (self.season - 1) + (1.0,), (*pattern[1:], pattern[0])

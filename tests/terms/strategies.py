@@ -142,7 +142,10 @@ def integrated(values: dict, x: float) -> dict:
     season = values.get("seasonal")
     if season is not None:
         season["period"] = 2 + season["period"] % 3
-    if isinstance(values.get("period"), int):
+        season["d"] = season.get("d", 0) % 3
+    if "d" in values:
+        values["d"] %= 3
+    if "period" in values:
         values["period"] = 2 + values["period"] % 5
     for name in ("start", "before"):
         if name in values:
