@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Iterable
-from textwrap import fill
+from textwrap import fill, shorten
 from typing import Any
 
 from procgen.chance.laws import LAWS, Law
@@ -19,7 +20,7 @@ class UnknownName(ValueError):
 
 
 def screen(width: int = 100) -> str:
-    """Every kind of term by family, one line each where they fit, and the laws."""
+    """Every kind of term by family, one line each, and the laws."""
     lines: list[str] = []
     pad = max(len(kind) for kind in catalogue()) + 4
     family = None
@@ -27,7 +28,8 @@ def screen(width: int = 100) -> str:
         if term.family != family:
             family = term.family
             lines += ["", family]
-        lines.append(_hanging(f"  {kind}", term.purpose, pad, width))
+        brief = shorten(re.split("[:;] ", term.purpose)[0], width - pad, placeholder=" …")
+        lines.append(f"  {kind}".ljust(pad) + brief)
     lines += [
         "",
         "laws of a shock",
@@ -54,7 +56,7 @@ def page(name: str, width: int = 100) -> str:
 def example_spec(kind: str) -> str:
     """A whole spec around the example of a term."""
     shared = "shared:\n  weather: [{ar: {phi: 0.9, total_sd: 1}}]\n" if kind == "use" else ""
-    head = "procgen: 1\nseed: 1\npaths: 100\ntime: {steps: 50}\n"
+    head = "procgen: 1\nseed: 1\npaths: 100\ntime: {start: 2027-01-04, every: 1h, steps: 50}\n"
     return f"{head}{shared}series:\n  x: [{{{catalogue()[kind].example}}}]\n"
 
 
