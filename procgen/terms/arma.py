@@ -22,9 +22,11 @@ def recursion(phi, theta, x, a):
     for t in range(x.shape[0] - p):
         v = a[t + q]
         for i in range(p):
-            v = v + phi[i] * x[t + p - 1 - i]
+            if phi[i] != 0.0:  # most of a seasonal polynomial is 0
+                v = v + phi[i] * x[t + p - 1 - i]
         for j in range(q):
-            v = v + theta[j] * a[t + q - 1 - j]
+            if theta[j] != 0.0:
+                v = v + theta[j] * a[t + q - 1 - j]
         x[t + p] = v
 
 
@@ -36,9 +38,11 @@ def inversion(phi, theta, x, a):
     for t in range(x.shape[0] - p):
         v = x[t + p]
         for i in range(p):
-            v = v - phi[i] * x[t + p - 1 - i]
+            if phi[i] != 0.0:
+                v = v - phi[i] * x[t + p - 1 - i]
         for j in range(q):
-            v = v - theta[j] * a[t + q - 1 - j]
+            if theta[j] != 0.0:
+                v = v - theta[j] * a[t + q - 1 - j]
         a[t + q] = v
 
 
