@@ -33,6 +33,7 @@ from procgen.spec.units import (
     parse_length,
     shown,
 )
+from procgen.spec.zones import offsets
 
 LAST_YEAR = 9998  # one short of what a datetime can hold, for the ends of steps and for time zones
 _EPOCH = date(1970, 1, 1).toordinal()
@@ -71,6 +72,19 @@ class Grid:
         if self.every[1] in ABSOLUTE:
             return steps * self._length + self._utc(self.start)
         return self._calendar_utc(self._local(steps))
+
+    def local(self, steps: np.ndarray) -> np.ndarray:
+        """Return the local clock where steps begin: int64 microseconds since 1970-01-01T00:00 by that clock.
+
+        Raises ValueError when the grid has no start.
+        """
+        if self.start is None or self.every is None:
+            raise ValueError("these steps have no local time: the spec's time has no start")
+        steps = np.asarray(steps, np.int64)
+        if self.every[1] not in ABSOLUTE:
+            return self._local(steps)
+        utc = steps * self._length + self._utc(self.start)
+        return utc if self.zone is None else utc + offsets(self.zone, utc)
 
     def last_year(self) -> int:
         """Return the year in which the last step ends, to within a few days; needs a start."""

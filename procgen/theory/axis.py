@@ -12,9 +12,12 @@ from procgen.theory import known
 from procgen.theory.expression import Expression, opaque, product
 from procgen.theory.garch import Garch
 from procgen.theory.known import Known
+from procgen.theory.laws import is_gaussian
 from procgen.theory.linear import At, Base, Linear
-from procgen.theory.sources import GARCH, IID, SQUARES, Source, Space
+from procgen.theory.processes import Chain, Curved, Held, Hinged, Process, mean_at
+from procgen.theory.sources import GARCH, IID, PROCESS, SQUARES, Source, Space, roots
 from procgen.theory.unknown import Unknown
+from procgen.theory.verdict import CYCLES, judge
 
 
 @dataclass
@@ -32,6 +35,7 @@ class Axis:
     period: float | None = None  # of the term at work, if it has one
     space: Space = field(init=False)
     _bases: dict[tuple, Base] = field(default_factory=dict)
+    _processes: list[Source] = field(default_factory=list)
 
     def __post_init__(self) -> None:
         self.space = Space(self.correlation, self.horizon)
@@ -51,6 +55,10 @@ class Axis:
             return Expression(self.space, known.constant(float(f(np.zeros(1, np.int64))[0])))
         key = ("known", self.name, id(f), len(self._bases))
         return Expression(self.space, known.observed(key, f, self.horizon, self.name, self.period))
+
+    def level(self, value: float) -> Expression:
+        """The same known value at every step."""
+        return Expression(self.space, known.constant(float(value)))
 
     def source(self, key: str, law: Any, sd: float) -> Expression:
         """Independent shocks of a law, standard deviation `sd`, at the address `key`."""
@@ -121,6 +129,54 @@ class Axis:
         drifting = Expression(self.space, known.constant(float(drift))) + noise
         walk = drifting.integrate(float(start))
         return Expression(self.space, walk.mean_path, walk.linear, walk.terms, noise.outputs)
+
+    def chain(self, key: str, law: Any, p: float, r: float) -> Expression:
+        """0 or 1 by a stationary chain, driven by the stream `key`: 1 with probability p, autocorrelations r^lag."""
+        driver = self.source(key, law, 1.0)
+        return self._process(Chain(key, (driver,), p, r), known.constant(p))
+
+    def held(self, x: Expression, step_of: Callable[[np.ndarray], np.ndarray], period: int) -> Expression:
+        """x at the step `step_of(t)`, which must be an int64 function of int64 steps and repeat after `period`."""
+        note = f"held for {period} steps in {self.name}"
+        cycle = frozenset([float(period)])
+        says = () if period == 1 else ((CYCLES, note),)
+        path = known.whole(("held", self.name), lambda t: mean_at(x, step_of(np.asarray(t, np.int64))), cycle, note)
+        if x.mean_path.value is not None and not x.terms:
+            path = x.mean_path
+        elif x.mean_path.value is None:
+            path = known.observed(("held", self.name), path.at, self.horizon, self.name)
+        return self._process(Held(self.name, x, step_of, says), path) if x.sources else Expression(self.space, path)
+
+    def hinge(self, x: Expression) -> Expression:
+        """max(x, 0): closed where x is known or Gaussian."""
+        return self._of_gaussian(x, lambda v: np.maximum(v, 0.0), Hinged(self.name, x))
+
+    def curved(self, x: Expression, f: Callable[[np.ndarray], np.ndarray]) -> Expression:
+        """f(x) for a smooth f of slow growth: by its Hermite series where x is Gaussian."""
+        return self._of_gaussian(x, f, Curved(self.name, x, f))
+
+    def _of_gaussian(self, x: Expression, f: Callable[[np.ndarray], np.ndarray], process: Any) -> Expression:
+        if not x.sources:
+            if x.mean_path.value is not None:
+                return Expression(self.space, known.constant(float(f(np.array(x.mean_path.value)))))
+            path, note = x.mean_path, "; ".join(x.mean_path.notes)
+            whole = known.whole(("of", self.name, path.key), lambda t: f(path.at(t)), path.periods, note)
+            return Expression(self.space, whole)
+        if not is_gaussian(x):
+            return self._given_up(x, "a function with a bend of what is not Gaussian has no closed moments")
+        steady = judge(x).covariance_stationary
+        if steady and x.mean_path.value is not None:
+            return self._process(process, known.constant(float(process.mean(np.zeros(1, np.int64))[0])))
+        periods, note = x.mean_path.periods if steady else None, f"the mean moves in {self.name}"
+        key = ("mean", self.name, len(self._processes))
+        return self._process(process, known.whole(key, process.mean, periods, note))
+
+    def _process(self, process: Process, mean: Known) -> Expression:
+        depends = frozenset(root for x in process.ingredients for source in x.sources for root in roots(source))
+        key = f"process {len(self._processes)} of {process.name}"
+        source = Source(key, PROCESS, np.nan, detail=process, depends=depends)
+        self._processes.append(source)
+        return Expression(self.space, mean, Linear({At(self._base(source, (), False), 0): 1.0}))
 
     def product(self, expressions: Sequence[Expression]) -> Expression:
         """The product of series."""

@@ -6,7 +6,8 @@ import numpy as np
 
 from procgen.theory.arma import cross_covariance
 from procgen.theory.linear import At, Base, Linear, Season, Sum, base_of
-from procgen.theory.sources import Space
+from procgen.theory.processes import mixed
+from procgen.theory.sources import PROCESS, Space
 from procgen.theory.system import LARGEST_STATE, state_size, system_of
 from procgen.theory.weights import covariance_by_weights
 
@@ -23,7 +24,9 @@ def covariance(space: Space, x: Linear, y: Linear, t: np.ndarray, s: np.ndarray)
         left, right = x.only(group), y.only(group)
         if not left or not right:
             continue
-        if left.is_plain and right.is_plain:
+        if any(source.kind == PROCESS for source in group):
+            total += mixed(space, left, right, t, s, covariance)
+        elif left.is_plain and right.is_plain:
             total += _plain(space, left, right, t, s)
         else:
             total += _joint(space, left, right, t, s)

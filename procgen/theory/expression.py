@@ -18,7 +18,7 @@ from procgen.theory import known, monomials
 from procgen.theory.known import Known
 from procgen.theory.linear import At, Base, Linear, Sum
 from procgen.theory.monomials import Term, in_order
-from procgen.theory.sources import OPAQUE, Source, Space
+from procgen.theory.sources import OPAQUE, Source, Space, roots
 from procgen.theory.unknown import Unknown
 
 MOST_TERMS = 512
@@ -161,9 +161,9 @@ def product(space: Space, expressions: Sequence[Expression]) -> Expression:
 def opaque(space: Space, ingredients: Sequence[Expression], reason: str, mean: Known | None = None) -> Expression:
     """A series whose covariances are unknown for a reason; its mean too unless it is given."""
     behind = {source for x in ingredients for source in x.sources}
-    roots = frozenset(r for s in behind for r in (s.depends if s.kind == OPAQUE else (s.owner or s,)))
+    depends = frozenset(root for s in behind for root in roots(s))
     source = Source(
-        f"opaque {next(_serial)}", OPAQUE, np.nan, detail=tuple(ingredients), depends=roots, reason=reason,
+        f"opaque {next(_serial)}", OPAQUE, np.nan, detail=tuple(ingredients), depends=depends, reason=reason,
         centred=mean is not None,
     )  # fmt: skip
     return Expression(space, mean or known.constant(0.0), Linear({At(Base(source), 0): 1.0}))

@@ -10,7 +10,7 @@ from procgen.theory.covariance import covariance
 from procgen.theory.expression import Expression
 from procgen.theory.linear import At
 from procgen.theory.monomials import Term
-from procgen.theory.sources import GARCH, IID, OPAQUE, SQUARES, Source, Space
+from procgen.theory.sources import GARCH, IID, OPAQUE, PROCESS, SQUARES, Source, Space
 from procgen.theory.unknown import Unknown
 
 
@@ -36,6 +36,8 @@ def marginal(x: Expression, step: int) -> Any:
     if not x.terms and len(x.linear) == 1:
         (key, c), level = next(iter(x.linear.items())), float(x.mean(at)[0])
         source = key.base.source if isinstance(key, At) and not key.base.phi else None
+        if isinstance(key, At) and source is not None and source.kind == PROCESS:
+            return Affine(source.detail.marginal(step - key.delay), level, c)
         if source is not None and source.kind == IID:
             return Affine(source.law.distribution(), level, c * float(np.sqrt(source.variance)))
     raise Unknown(f"a combination of shocks that are not normal ({_names(x)}) has no closed law")
@@ -108,6 +110,8 @@ def _orders(space: Space, term: Term) -> list[float]:
 def _order(source: Source) -> float:
     if source.kind == OPAQUE:
         raise Unknown(source.reason)
+    if source.kind == PROCESS:
+        return float(source.detail.highest_moment)
     if source.kind in (GARCH, SQUARES):
         order = source.detail.highest_moment
         return order if source.kind == GARCH else order / 2.0

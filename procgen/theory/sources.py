@@ -15,7 +15,7 @@ import numpy as np
 from procgen.theory.copula import is_symmetric, law_correlation
 from procgen.theory.unknown import Unknown
 
-IID, GARCH, SQUARES, OPAQUE = "independent", "garch", "squares", "opaque"
+IID, GARCH, SQUARES, OPAQUE, PROCESS = "independent", "garch", "squares", "opaque", "process"
 
 
 @dataclass(frozen=True, eq=False)
@@ -23,8 +23,8 @@ class Source:
     """White noise at an address; one object each.
 
     `variance` is inf where there is none. `path` gives the variance at steps >= 0 for a source that leaves from a
-    given past, until step `settles` (inf: for ever). An opaque source stands for what has no closed form:
-    `depends` are the sources behind it.
+    given past, until step `settles` (inf: for ever). An opaque source stands for what has no closed form, a process
+    for what has a memory of its own (`theory.processes`): `depends` are the sources behind them.
     """
 
     key: str
@@ -34,7 +34,7 @@ class Source:
     path: Callable[[np.ndarray], np.ndarray] | None = None
     settles: float = 0.0
     owner: Source | None = None  # the garch whose squares a SQUARES source drives
-    detail: Any = None  # the Garch behind a garch or squares source; the ingredients of an opaque one
+    detail: Any = None  # the Garch behind a garch or squares source; the ingredients of an opaque one; the Process
     depends: frozenset[Source] = frozenset()
     reason: str = ""
     centred: bool = True  # False for an opaque source whose mean is not known either
@@ -80,7 +80,7 @@ class Space:
     def dependent(self, a: Source, b: Source) -> bool:
         if a is b:
             return True
-        left, right = _roots(a), _roots(b)
+        left, right = roots(a), roots(b)
         return any(self.normal_correlation(x, y) != 0.0 for x in left for y in right)
 
     def components(self, sources: Iterable[Source]) -> list[list[Source]]:
@@ -97,6 +97,8 @@ class Space:
         if a is b:
             if a.kind == OPAQUE:
                 raise Unknown(a.reason)
+            if a.kind == PROCESS:
+                raise Unknown(f"{a.detail.name} has a memory of its own")
             if not np.isfinite(a.variance):
                 raise Unknown(f"infinite variance of {_named(a)}")
             return a.variance
@@ -105,6 +107,8 @@ class Space:
         for one in (a, b):
             if one.kind == OPAQUE:
                 raise Unknown(one.reason)
+            if one.kind == PROCESS:
+                raise Unknown(f"the covariance of {a.key} and {b.key} is not known in closed form")
         if SQUARES in (a.kind, b.kind):
             return self._with_squares(a, b)
         if GARCH in (a.kind, b.kind):
@@ -128,8 +132,9 @@ class Space:
         raise Unknown(f"{garch.key} is skewed: its squares and {other.key} have no closed covariance")
 
 
-def _roots(source: Source) -> Iterable[Source]:
-    return source.depends if source.kind == OPAQUE else (source.owner or source,)
+def roots(source: Source) -> Iterable[Source]:
+    """The primary sources behind a source."""
+    return source.depends if source.kind in (OPAQUE, PROCESS) else (source.owner or source,)
 
 
 def _named(source: Source) -> str:

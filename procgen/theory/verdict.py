@@ -21,7 +21,7 @@ from procgen.theory.expression import Expression
 from procgen.theory.known import Known
 from procgen.theory.linear import At, Frozen, Key, Linear, Season, Sum, base_of
 from procgen.theory.monomials import Term
-from procgen.theory.sources import GARCH, OPAQUE, SQUARES, Source, Space
+from procgen.theory.sources import GARCH, OPAQUE, PROCESS, SQUARES, Source, Space
 
 INFINITE = "infinite variance"
 GROWS = "variance grows"
@@ -145,16 +145,24 @@ def _constant_path(source: Source) -> bool:
 
 def _source(findings: _Findings, source: Source) -> None:
     if source.kind == OPAQUE:
-        for ingredient in source.detail:
-            _random_parts(findings, ingredient)
-            moving = ingredient.mean_path
-            if moving.periods is None or moving.periods:
-                findings.say(CYCLES if moving.periods else VARIES, "; ".join(moving.notes) or "a known path")
+        _ingredients(findings, source.detail)
         findings.notes.append(f"moments unknown: {source.reason}")
+    elif source.kind == PROCESS:
+        _ingredients(findings, source.detail.ingredients)
+        for verdict, reason in source.detail.says:
+            findings.say(verdict, reason)
     elif source.kind in (GARCH, SQUARES):
         _heteroskedastic(findings, source)
     elif not np.isfinite(source.variance):
         findings.say(INFINITE, f"{source.key} has a law without a variance")
+
+
+def _ingredients(findings: _Findings, ingredients: Iterable[Expression]) -> None:
+    for ingredient in ingredients:
+        _random_parts(findings, ingredient)
+        moving = ingredient.mean_path
+        if moving.periods is None or moving.periods:
+            findings.say(CYCLES if moving.periods else VARIES, "; ".join(moving.notes) or "a known path")
 
 
 def _heteroskedastic(findings: _Findings, source: Source) -> None:

@@ -19,6 +19,8 @@ from procgen.spec.declare import (
     Text,
     Whole,
 )
+from procgen.spec.local import CalendarDays, EveryYear
+from procgen.spec.named import Named, Names, Rows
 
 NOISE = {"white_noise": {"sd": 1}}
 
@@ -40,12 +42,19 @@ def valid(domain, laws):
         return mapping(domain.parameters, laws)
     if isinstance(domain, Records):
         return st.lists(mapping(domain.parameters, laws), min_size=1, max_size=2)
+    if isinstance(domain, Named):
+        return st.dictionaries(st.sampled_from(["a", "b", "c"]), valid(domain.each, laws), min_size=1)
+    if isinstance(domain, Rows):
+        return st.lists(valid(domain.each, laws), min_size=1, max_size=3) | st.just([[0.5, 0.5], [0.2, 0.8]])
     simple = {
+        Names: st.just(["a", "b"]),
         Text: st.just("x"),
         Flag: st.booleans(),
         Span: st.integers(1, 50) | st.just("3 steps"),
         Moment: st.integers(-9, 9),
         Body: st.just([NOISE]),
+        CalendarDays: st.just(["2027-12-24", "02-29"]),
+        EveryYear: st.just("07-15"),
     }
     return simple[type(domain)]
 

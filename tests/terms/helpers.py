@@ -14,7 +14,8 @@ from procgen.terms.run import Run
 
 def graph_of(series: str, *, steps: int = 60, seed: int = 11, rest: str = "") -> Graph:
     """The graph of a spec given by its `series:` block (indented by two) and anything after it."""
-    text = f"procgen: 1\nseed: {seed}\npaths: 64\ntime: {{steps: {steps}}}\n{rest}\nseries:\n{series}\n"
+    time = f"{{start: 2027-01-04, every: 1h, steps: {steps}}}"
+    text = f"procgen: 1\nseed: {seed}\npaths: 64\ntime: {time}\n{rest}\nseries:\n{series}\n"
     return build(read_text(text, catalogue(), LAWS))
 
 

@@ -6,7 +6,7 @@ import numpy as np
 from hypothesis import strategies as st
 
 from procgen.chance.laws import LAWS
-from procgen.spec import declare
+from procgen.spec import declare, local
 from procgen.terms import catalogue
 
 
@@ -32,6 +32,10 @@ def value_of(parameter: declare.Parameter) -> st.SearchStrategy:
         return st.lists(numbers(domain.each), min_size=max(1, domain.min_length), max_size=3)
     if isinstance(domain, declare.Choice):
         return st.sampled_from(domain.words)
+    if isinstance(domain, local.CalendarDays):
+        return st.lists(st.sampled_from(["2027-01-04", "2027-01-05", "01-04", "02-29"]), min_size=1, max_size=3)
+    if isinstance(domain, local.EveryYear):
+        return st.sampled_from(["01-01", "07-20", "12-31"])
     if isinstance(domain, declare.Flag):
         return st.booleans()
     if isinstance(domain, declare.Span):
@@ -137,6 +141,39 @@ def bending(values: dict, x: float) -> dict:
     return values | ({"bends": bends} if bends else {})
 
 
+def shifting(values: dict, x: float) -> dict:
+    """A length where the shape of an event has one."""
+    values.pop("length", None)
+    return values if values.get("shape", "step") == "step" else values | {"length": 1 + 5 * x}
+
+
+def counting(values: dict, x: float) -> dict:
+    """A value for each place of the calendar."""
+    return values | {"values": [x * i for i in range(local.PARTS[values["by"]])]}
+
+
+def switching(values: dict, x: float) -> dict:
+    """By chance, or by dates that are in order."""
+    if values.get("spans"):
+        return {"spans": [span | {"until": span["from"] + 3} for span in values["spans"]]}
+    return {"share": x, "stay": 10}
+
+
+def bounded(values: dict, x: float) -> dict:
+    """Bounds in order."""
+    return values | {"low": -x, "high": x}
+
+
+def one_sided(values: dict, x: float) -> dict:
+    """One threshold."""
+    return {name: value for name, value in values.items() if name != "below"} | {"above": x}
+
+
+def between(values: dict, x: float) -> dict:
+    """A body within the bounds of a logit."""
+    return {"of": [{"sigmoid": {"of": values["of"]}, "as": "?"}]}
+
+
 def integrated(values: dict, x: float) -> dict:
     """A whole season, one start for all, and a past that is long enough or none."""
     season = values.get("seasonal")
@@ -156,6 +193,13 @@ def integrated(values: dict, x: float) -> dict:
 
 
 MEND = {
+    "event": shifting,
+    "calendar": counting,
+    "flag": switching,
+    "clip": bounded,
+    "sigmoid": bounded,
+    "hinge": one_sided,
+    "logit": between,
     **dict.fromkeys(("ar", "ma", "arma"), driven),
     "random_walk": walking,
     **dict.fromkeys(("arima", "seasonal_random_walk", "ornstein_uhlenbeck"), integrated),
@@ -166,6 +210,9 @@ MEND = {
 }
 
 
+TIME = {"start": "2027-01-04", "every": "1h"}
+
+
 def labelled(entries: list, count: list[int]) -> list:
     """The same entries, each with a label of its own."""
     for entry in entries:
@@ -173,8 +220,9 @@ def labelled(entries: list, count: list[int]) -> list:
             count[0] += 1
             entry["as"] = f"n{count[0]}"
         for values in entry.values():
-            if isinstance(values, dict) and isinstance(values.get("of"), list):
-                labelled(values["of"], count)
+            for name in ("of", "then", "and"):
+                if isinstance(values, dict) and isinstance(values.get(name), list):
+                    labelled(values[name], count)
     return entries
 
 
@@ -191,4 +239,4 @@ def specs(draw) -> dict:
         series[name] = labelled(body, [0])
     steps = draw(st.integers(1, 40))
     shared = {"w": labelled([draw(entries(0))], [0])}
-    return {"procgen": 1, "seed": 5, "paths": 20, "time": {"steps": steps}, "shared": shared, "series": series}
+    return {"procgen": 1, "seed": 5, "paths": 20, "time": TIME | {"steps": steps}, "shared": shared, "series": series}

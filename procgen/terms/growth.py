@@ -1,0 +1,83 @@
+"""Deterministic growth: exponential, logistic (an S-curve), and a trend whose slope fades."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from procgen.chance.portable import exp, log
+from procgen.spec.declare import Moment, Parameter, Real
+from procgen.terms.base import Array, number, signed
+from procgen.terms.level import Known
+
+LARGEST = 600.0  # exponents are held within ±600: no level that means anything is near e^600
+
+
+class ExponentialTrend(Known):
+    kind = "exponential_trend"
+    family = "level and shape"
+    purpose = "growth or decay by a constant rate, towards or away from a base"
+    source = "common practice, no source"
+    example = "exponential_trend: {level: 40, rate: 0.02, base: 10}"
+    knows = "mean; no variance"
+    parameters = (
+        Parameter("level", "c", Real(), "height above the base at step 0", unit="series"),
+        Parameter("rate", "r", Real(), "continuous growth rate; below 0 it decays", unit="1/step", per="rate"),
+        Parameter("base", "b", Real(), "what it grows away from, or decays to", default=0.0, unit="series"),
+    )
+
+    def at(self, steps: Array) -> Array:
+        return self.base + self.level * _exp(self.rate * steps.astype(np.float64))
+
+    def equation(self, *inputs):
+        return f"x[t] = {number(self.base)} {signed(self.level, f'exp({number(self.rate)} t)')}"
+
+
+class LogisticTrend(Known):
+    kind = "logistic_trend"
+    family = "level and shape"
+    purpose = "an S-curve from a floor to a capacity"
+    source = "Verhulst (1838)"
+    example = "logistic_trend: {capacity: 100, rate: 0.15, midpoint: 25}"
+    knows = "mean; no variance"
+    parameters = (
+        Parameter("capacity", "K", Real(), "the level that it grows to", unit="series"),
+        Parameter("rate", "r", Real(above=0), "growth rate far below the capacity", unit="1/step", per="rate"),
+        Parameter("midpoint", "τ", Moment(), "where it is halfway", unit="steps"),
+        Parameter("floor", "b", Real(), "the level that it comes from", default=0.0, unit="series"),
+    )
+
+    def at(self, steps: Array) -> Array:
+        rest = _exp(self.rate * (self.midpoint - steps.astype(np.float64)))
+        return self.floor + (self.capacity - self.floor) / (1.0 + rest)
+
+    def equation(self, *inputs):
+        bend = f"(1 + exp(−{number(self.rate)}(t − {number(self.midpoint)})))"
+        return f"x[t] = {number(self.floor)} + {number(self.capacity - self.floor)}/{bend}"
+
+
+class DampedTrend(Known):
+    kind = "damped_trend"
+    family = "level and shape"
+    purpose = "a line whose slope fades by a factor a step, to a last level; before step 0 it is straight"
+    source = "Gardner & McKenzie (1985)"
+    example = "damped_trend: {level: 50, slope: 2, damping: 0.95}"
+    knows = "mean; no variance"
+    parameters = (
+        Parameter("level", "c", Real(), "value at step 0", default=0.0, unit="series"),
+        Parameter("slope", "b", Real(), "change from step 0 to step 1", unit="series", per="rate"),
+        Parameter("damping", "φ", Real(above=0, below=1), "factor from one step's slope to the next"),
+    )
+
+    def at(self, steps: Array) -> Array:
+        t = steps.astype(np.float64)
+        gone = 1.0 - _exp(np.maximum(t, 0.0) * log(self.damping))
+        return self.level + self.slope * np.where(t < 0.0, t, gone / (1.0 - self.damping))
+
+    def equation(self, *inputs):
+        last = self.slope / (1.0 - self.damping)
+        fading = f"(1 − {number(self.damping)}^t)"
+        return f"x[t] = {number(self.level)} {signed(last, fading)}"
+
+
+def _exp(x: Array) -> Array:
+    return exp(np.minimum(np.maximum(x, -LARGEST), LARGEST))
