@@ -8,7 +8,7 @@ from typing import Any
 
 import numpy as np
 
-from procgen.theory import known
+from procgen.theory import known, markov
 from procgen.theory.expression import Expression, opaque, product
 from procgen.theory.garch import Garch
 from procgen.theory.known import Known
@@ -134,6 +134,20 @@ class Axis:
         """0 or 1 by a stationary chain, driven by the stream `key`: 1 with probability p, autocorrelations r^lag."""
         driver = self.source(key, law, 1.0)
         return self._process(Chain(key, (driver,), p, r), known.constant(p))
+
+    def states(
+        self, key: str, law: Any, transitions: Any, shares: Any, start: int | None, names: tuple[str, ...]
+    ) -> Expression:
+        """The number of the state of a Markov chain driven by the stream `key`; `state k` of it is 1 in state k.
+
+        Stationary with the given shares, or from state `start` at step 0.
+        """
+        chain = markov.States(transitions, shares, start)
+        return markov.number_of_state(self._process, self.source(key, law, 1.0), key, chain, names)
+
+    def offering(self, x: Expression, **outputs: Expression) -> Expression:
+        """x, with hidden outputs."""
+        return markov.offering(x, outputs)
 
     def held(self, x: Expression, step_of: Callable[[np.ndarray], np.ndarray], period: int) -> Expression:
         """x at the step `step_of(t)`, which must be an int64 function of int64 steps and repeat after `period`."""

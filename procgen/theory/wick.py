@@ -18,7 +18,7 @@ import numpy as np
 from procgen.theory import cumulants
 from procgen.theory.covariance import covariance
 from procgen.theory.linear import Linear
-from procgen.theory.sources import GARCH, IID, OPAQUE, Source, Space
+from procgen.theory.sources import GARCH, IID, OPAQUE, PROCESS, Source, Space
 from procgen.theory.unknown import Unknown
 
 Pair = tuple[np.ndarray, np.ndarray]  # apart, cross
@@ -156,6 +156,8 @@ def _few_moments(space, group, factors, tilts, t, s) -> Pair:
         return _split(apart + cross + cumulants.garch_product(space, one, factors, t, s), apart, factors)
     if order == 2:
         return _gaussian(space, factors, tilts, t, s)
+    if all(source.kind == PROCESS for source in group):
+        return group[0].detail.product(factors, t, s)
     if order > 4 or one is None or one.kind != IID:
         raise Unknown(f"moments of order {order} of {_names(group)} are not known in closed form")
     apart, cross = _gaussian(space, factors, tilts, t, s)

@@ -6,7 +6,7 @@ import numpy as np
 from hypothesis import strategies as st
 
 from procgen.chance.laws import LAWS
-from procgen.spec import declare, local
+from procgen.spec import declare, local, named
 from procgen.terms import catalogue
 
 
@@ -77,17 +77,24 @@ def coefficients(partial: list[float]) -> list[float]:
     return [float(np.round(c, 6)) for c in phi]
 
 
+def nests(term) -> bool:
+    """Whether a term has bodies, which must end somewhere."""
+    return term.composition or any(isinstance(getattr(p.domain, "each", None), declare.Body) for p in term.parameters)
+
+
 @st.composite
 def entries(draw, depth: int = 2) -> dict:
     """An entry of any kind: a term, or a composition of entries."""
-    kinds = [kind for kind, term in catalogue().items() if kind != "use" and (depth or not term.composition)]
+    kinds = [kind for kind, term in catalogue().items() if kind != "use" and (depth or not nests(term))]
     kind = draw(st.sampled_from(kinds))
     term = catalogue()[kind]
-    plain = [p for p in term.parameters if not isinstance(p.domain, declare.Body)]
+    plain = [p for p in term.parameters if not isinstance(p.domain, declare.Body | named.Named)]
     values = draw(mapping(plain))
     for parameter in term.parameters:
-        if isinstance(parameter.domain, declare.Body):
+        if isinstance(parameter.domain, declare.Body) and parameter.name != "follow":
             values[parameter.name] = draw(st.lists(entries(depth - 1), min_size=1, max_size=2))
+        if parameter.name == "branches":
+            values["branches"] = {n: draw(st.lists(entries(depth - 1), min_size=1, max_size=2)) for n in ("n1", "n2")}
     mended = MEND.get(kind, lambda values, x: values)(values, draw(st.floats(0.1, 0.9).map(lambda x: round(x, 2))))
     entry = {kind: mended, "as": "?"}
     if draw(st.booleans()):
@@ -164,6 +171,24 @@ def bounded(values: dict, x: float) -> dict:
     return values | {"low": -x, "high": x}
 
 
+def moving(values: dict, x: float) -> dict:
+    """Two states, by their durations or by transitions."""
+    names = list(values.pop("branches", {})) or ["n1", "n2"]
+    stays = {"durations": dict(zip(names, (1 + 20 * x, 3), strict=True))}
+    rows = {"transitions": [[x, 1 - x], [1, 0]]}
+    return (stays if x < 0.5 else rows) | ({"start": names[1]} if 0.3 < x < 0.4 else {})
+
+
+def chaining(values: dict, x: float) -> dict:
+    """Names of two states, and how they follow each other."""
+    return {"states": ["n1", "n2"]} | moving({}, x)
+
+
+def branching(values: dict, x: float) -> dict:
+    """Two branches, and how they follow each other."""
+    return {"branches": dict(values["branches"])} | moving(values, x)
+
+
 def one_sided(values: dict, x: float) -> dict:
     """One threshold."""
     return {name: value for name, value in values.items() if name != "below"} | {"above": x}
@@ -196,6 +221,8 @@ MEND = {
     "event": shifting,
     "calendar": counting,
     "flag": switching,
+    "chain": chaining,
+    "regimes": branching,
     "clip": bounded,
     "sigmoid": bounded,
     "hinge": one_sided,
@@ -223,6 +250,8 @@ def labelled(entries: list, count: list[int]) -> list:
             for name in ("of", "then", "and"):
                 if isinstance(values, dict) and isinstance(values.get(name), list):
                     labelled(values[name], count)
+            for body in values.get("branches", {}).values() if isinstance(values, dict) else ():
+                labelled(body, count)
     return entries
 
 

@@ -1,0 +1,285 @@
+"""Markov chains of a few named states: how they are declared, how they move, and the term `chain`."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Mapping, Sequence
+from typing import Any, ClassVar
+
+import numpy as np
+
+from procgen.chance.kernel import kernel
+from procgen.chance.laws import LAWS
+from procgen.spec.declare import Parameter, Reals, Span, Text
+from procgen.spec.named import Named, Names, Rows
+from procgen.terms.base import Ahead, Array, Draw, Issue, State, Term, number
+
+UNIFORM = LAWS["uniform"]()
+ROOT_12 = 3.4641016151377544
+NEVER = 2.0  # beyond any standardised uniform
+STATIONARY = "stationary"
+MOST_STATES = 20
+ROW_ERROR = 1e-9
+
+DURATIONS = Parameter(
+    "durations",
+    "ℓ",
+    Named(Span()),
+    "mean time spent in each state at a go; what comes after it is any other state alike",
+    default=None,
+    unit="steps",
+)
+TRANSITIONS = Parameter(
+    "transitions",
+    "P",
+    Rows(Reals(at_least=0, at_most=1)),
+    "in place of durations: row i has the chances to go from state i to each, in order",
+    default=None,
+)
+START = Parameter("start", "", Text(), "the state at step 0; stationary: drawn by the shares", default=STATIONARY)
+
+
+@kernel
+def move(z, thresholds, m, s, out):
+    """out[t] = how many of the m thresholds of the state before are at most z[t]; returns the last row."""
+    for t in range(z.shape[0]):
+        after = 0.0 * s
+        for j in range(m):
+            at = 0.0 * s
+            for i in range(m + 1):
+                at = at + thresholds[i * m + j] * (s == i)
+            after = after + 1.0 * (z[t] >= at)
+        s = after
+        out[t] = s
+    return s
+
+
+def check(values: Mapping[str, Any], names: Sequence[str]) -> Iterable[Issue]:
+    """What is wrong with durations, transitions and start for states of these names."""
+    if not 2 <= len(names) <= MOST_STATES:
+        yield "durations", f"expected 2 to {MOST_STATES} states, got {len(names)}"
+        return
+    durations, rows = values["durations"], values["transitions"]
+    if (durations is None) == (rows is None):
+        yield "durations", "expected `durations` or `transitions`, exactly one of them; give one"
+        return
+    found = list(_durations(durations, names) if rows is None else _rows(rows, names))
+    yield from found
+    if values["start"] not in (STATIONARY, *names):
+        yield "start", f"expected stationary, or one of {', '.join(names)}, got {values['start']}"
+    elif not found and values["start"] == STATIONARY and occupancy(matrix(values, names)) is None:
+        yield (
+            "transitions",
+            "expected one set of states that is entered sooner or later and never left, got more: the shares would "
+            "depend on the start; let one lead to the other, or give `start`",
+        )
+
+
+def _durations(durations: Mapping[str, float], names: Sequence[str]) -> Iterable[Issue]:
+    if set(durations) != set(names):
+        yield "durations", f"expected one for each of {', '.join(names)}, got {', '.join(durations)}"
+    for name, steps in durations.items():
+        if steps < 1.0:
+            yield "durations", f"expected at least 1 step for {name}, got {number(steps)}; a state lasts a step or more"
+
+
+def _rows(rows: Sequence[Sequence[float]], names: Sequence[str]) -> Iterable[Issue]:
+    if len(rows) != len(names) or any(len(row) != len(names) for row in rows):
+        sizes = " and ".join(dict.fromkeys(str(len(row)) for row in rows))
+        yield (
+            "transitions",
+            f"expected {len(names)} rows of {len(names)} numbers ({', '.join(names)}), got {len(rows)} of {sizes}",
+        )
+        return
+    for name, row in zip(names, rows, strict=True):
+        if abs(sum(row) - 1.0) > ROW_ERROR:
+            yield "transitions", f"expected the row of {name} to add up to 1, got {number(sum(row))}"
+
+
+def matrix(values: Mapping[str, Any], names: Sequence[str]) -> Array:
+    """Transition probabilities, (states, states); the last column is what is left of 1."""
+    p = np.zeros((len(names), len(names)))
+    for i, name in enumerate(names):
+        if values["transitions"] is not None:
+            p[i] = values["transitions"][i]
+            continue
+        leave = 1.0 / values["durations"][name]
+        p[i] = leave / (len(names) - 1)
+        p[i, i] = 1.0 - leave
+    p[:, -1] = np.maximum(1.0 - _cumulated(p)[:, -1], 0.0)
+    return p
+
+
+def _cumulated(p: Array) -> Array:
+    """Running sums of the rows but for the last column, from left to right."""
+    sums = [p[:, 0]]
+    for j in range(1, p.shape[1] - 1):
+        sums.append(sums[-1] + p[:, j])
+    return np.stack(sums, axis=1)
+
+
+def thresholds(p: Array) -> Array:
+    """Standardised uniforms from which on the next state is a later one, row by row, flat."""
+    c = _cumulated(p).ravel()
+    return np.where(c <= 0.0, -NEVER, np.where(c >= 1.0, NEVER, ROOT_12 * (c - 0.5)))
+
+
+def occupancy(p: Array) -> Array | None:
+    """Shares of the time in each state; None where they depend on the start.
+
+    By elimination of states without subtractions, so that small shares are exact too (Grassmann, Taksar & Heyman
+    1985).
+    """
+    reach = _reachable(p)
+    closed = [i for i in range(len(p)) if all(reach[j, i] for j in range(len(p)) if reach[i, j])]
+    if not all(reach[i, j] for i in closed for j in closed):
+        return None
+    a = p[np.ix_(closed, closed)].copy()
+    for n in range(len(a) - 1, 0, -1):
+        out = 0.0
+        for j in range(n):
+            out = out + a[n, j]
+        a[:n, n] = a[:n, n] / out
+        for j in range(n):
+            a[:n, j] = a[:n, j] + a[:n, n] * a[n, j]
+    weights = [1.0]
+    for n in range(1, len(a)):
+        w = 0.0
+        for i in range(n):
+            w = w + weights[i] * a[i, n]
+        weights.append(w)
+    total = 0.0
+    for w in weights:
+        total = total + w
+    shares = np.zeros(len(p))
+    shares[closed] = np.array(weights) / total
+    return shares
+
+
+def _reachable(p: Array) -> Array:
+    """Whether state j can be reached from i, itself included (Warshall 1962)."""
+    reach = (p > 0.0) | np.eye(len(p), dtype=bool)
+    for k in range(len(p)):
+        reach = reach | (reach[:, k : k + 1] & reach[k : k + 1, :])
+    return reach
+
+
+def backwards(p: Array, shares: Array) -> Array:
+    """Transition probabilities of the stationary chain seen backwards; states without a share stay where they are."""
+    q = np.eye(len(p))
+    for i in np.flatnonzero(shares > 0.0):
+        q[i] = shares * p[:, i] / shares[i]
+    return q
+
+
+class States:
+    """A chain as value code and theory need it: names, transition matrix, shares, and the state at step 0 if given."""
+
+    def __init__(self, values: Mapping[str, Any], names: Sequence[str]):
+        self.names = tuple(names)
+        self.p = matrix(values, names)
+        self.shares = occupancy(self.p)
+        self.start = None if values["start"] == STATIONARY else names.index(values["start"])
+
+    def first(self, z: Array) -> Array:
+        """The states at step 0, (paths,), from the standardised uniforms of that step."""
+        if self.start is not None:
+            return np.full(z.shape, float(self.start))
+        out = np.empty((1, len(z)))
+        row = np.tile(thresholds(self.shares[None, :]), len(self.p))
+        return move(z[None, :], row, len(self.p) - 1, np.zeros(len(z)), out)
+
+    def before(self, z: Array, s: Array) -> Array:
+        """The states at steps −n .. −1, from the uniforms at these steps and the states at step 0."""
+        out = np.empty_like(z)
+        if len(z):
+            move(z[::-1].copy(), thresholds(backwards(self.p, self.shares)), len(self.p) - 1, s, out)
+        return out[::-1].copy()
+
+    def go(self, z: Array, state: State) -> tuple[Array, State]:
+        """The states of the next steps, (steps, paths), and the last of them as a carried state."""
+        out, done = np.empty_like(z), 0
+        s = state["s"][0] if "s" in state else None
+        if s is None and len(z):
+            s, done = self.first(z[0]), 1
+            out[0] = s
+        if len(z) > done:
+            s = move(z[done:], thresholds(self.p), len(self.p) - 1, s, out[done:])
+        return out, state if s is None else {"s": s[None, :]}
+
+    def chances(self, steps: int, state: State) -> Array:
+        """Chances of each state at the coming steps, (states, steps, paths)."""
+        if "s" in state:
+            now = np.stack([np.where(state["s"][0] == i, 1.0, 0.0) for i in range(len(self.p))])
+        else:
+            now = self.shares[:, None] if self.start is None else np.eye(len(self.p))[:, self.start, None]
+        rows = []
+        for h in range(steps):
+            if h or "s" in state:
+                now = np.stack([sum(now[i] * self.p[i, j] for i in range(len(self.p))) for j in range(len(self.p))])
+            rows.append(now)
+        return np.stack(rows, axis=1)
+
+    def says(self) -> str:
+        """Transitions, shares and mean durations in words."""
+        rows = "; ".join(" ".join(number(round(x, 12)) for x in row) for row in self.p)
+        leave = [1.0 - self.p[i, i] for i in range(len(self.p))]
+        stays = [(name, 1.0 / p if p else np.inf) for name, p in zip(self.names, leave, strict=True)]
+        text = f"P = [{rows}]"
+        if self.shares is not None:
+            shares = zip(self.names, self.shares, strict=True)
+            text += f",  shares {', '.join(f'{name} {number(share)}' for name, share in shares)}"
+        return f"{text},  mean stays {', '.join(f'{name} {number(steps)}' for name, steps in stays)}"
+
+
+class Chain(Term):
+    kind = "chain"
+    family = "regimes"
+    purpose = "the number (0, 1, …) of the state that a Markov chain is in; for `regimes` that follow one chain"
+    source = "Feller (1968), ch. XV; Hamilton (1989)"
+    example = "chain: {states: [calm, storm], durations: {calm: 40, storm: 8}}"
+    knows = "mean, covariance at any lag, shares and mean stays"
+    parameters: ClassVar[tuple[Parameter, ...]] = (
+        Parameter("states", "", Names(), "their names, numbered from 0"),
+        DURATIONS,
+        TRANSITIONS,
+        START,
+    )
+
+    @classmethod
+    def check(cls, values):
+        yield from check(values, values["states"])
+
+    def __init__(self, values):
+        super().__init__(values)
+        self.chain = States(values, values["states"])
+
+    def draws(self):
+        return (Draw("chain", UNIFORM),)
+
+    def past(self):
+        return None if self.chain.start is None else 0
+
+    def reach(self, head):
+        return (head,)
+
+    def begin(self, before):
+        if not before.head:
+            return None, {}
+        z = before.inputs[0][len(before.inputs[0]) - before.head :]
+        return self.chain.before(z, self.chain.first(before.peek(0)[0])), {}
+
+    def recurse(self, inputs, state, at):
+        return self.chain.go(inputs[0], state)
+
+    def ahead(self, steps, state, *inputs):
+        chances = self.chain.chances(len(steps), state)
+        mean, square = (sum(float(i) ** k * c for i, c in enumerate(chances)) for k in (1, 2))
+        return Ahead(mean, np.maximum(square - mean * mean, 0.0))
+
+    def moments(self, axis, *inputs):
+        chain = self.chain
+        return axis.states(self.address, UNIFORM, chain.p, chain.shares, chain.start, chain.names)
+
+    def equation(self, *inputs):
+        names = ", ".join(f"{i} {name}" for i, name in enumerate(self.chain.names))
+        return f"s[t] ∈ {{{names}}},  {self.chain.says()}"
