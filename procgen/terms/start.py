@@ -70,18 +70,18 @@ def stationary_cross(a: Array, q: Array, b: Array) -> Array:
 
 
 def decay_length(a: Array, negligible: float = NEGLIGIBLE) -> int:
-    """The smallest n (to a power of two times three quarters) with every |Aⁿ| entry negligible."""
-    powers, n = [a], 1
+    """The smallest n with every entry of |Aⁿ| at most `negligible`, found by doubling and then halving."""
+    powers = [a]
     while np.max(np.abs(powers[-1])) > negligible:
-        powers.append(matmul(powers[-1], powers[-1]))
-        n *= 2
-        if n > LONGEST:
+        if 2 ** len(powers) > LONGEST:
             raise ValueError(f"the recursion still feels its start after {LONGEST:,} steps")
-    if n >= 4:
-        three_quarters = matmul(powers[-2], powers[-3])
-        if np.max(np.abs(three_quarters)) <= negligible:
-            return n // 4 * 3
-    return n
+        powers.append(matmul(powers[-1], powers[-1]))
+    n, reached = 0, np.eye(len(a))
+    for k in range(len(powers) - 2, -1, -1):
+        further = matmul(reached, powers[k])
+        if np.max(np.abs(further)) > negligible:
+            n, reached = n + 2**k, further
+    return n + 1
 
 
 @dataclass(frozen=True)
