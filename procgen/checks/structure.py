@@ -23,6 +23,7 @@ class Precision:
     type: str
     decimals: int | None
     random: bool
+    discrete: bool = False  # few values: float32 may hold them all, and paths may be equal
 
 
 @dataclass
@@ -48,7 +49,7 @@ class Structure:
                 off = np.abs(scaled - np.rint(scaled)) > 1e-9 + 4e-16 * np.abs(scaled)
             if off.any():
                 _note(self.off_grid, what.name, off, first_path, first_step)
-        elif what.type != "int64" and what.random:
+        elif what.type != "int64" and what.random and not what.discrete:
             sample = x[:, :_SAMPLE]
             with np.errstate(over="ignore", invalid="ignore"):
                 fits = int(np.count_nonzero(sample.astype(np.float32) == sample))

@@ -89,7 +89,8 @@ def plan_of(spec: Any, steps: int | None = None) -> Plan:
         way = route(name, th[name], graph, grain)
         series.append(plan)
         routes[name] = way
-        precision.append(Precision(name, declared.type, declared.decimals, bool(th[name].expression.sources)))
+        random = bool(th[name].expression.sources)
+        precision.append(Precision(name, declared.type, declared.decimals, random, th[name].discrete))
     ways = [way for way in routes.values() if isinstance(way, Route) and way.scores is not None]
     pairs = {(a.series, b.series): expected(a, b, th.axis.space) for a, b in list(combinations(ways, 2))[:PAIR_LIMIT]}
     return Plan(steps, series, precision, plan_cross(series, th.cross), routes, pairs)
@@ -181,6 +182,8 @@ def _shocks(gather: Gather, name: str) -> Iterator[Check]:
 
 def _chance_of_equal(series: SeriesPlan, plan: Plan) -> float:
     """Probability that two paths of a series are equal by rounding; 0 where values are not rounded."""
+    if series.theory.discrete:
+        return 1.0
     if not np.isfinite(series.variance).all():
         return 0.0
     moving = int(np.count_nonzero(series.variance > 0))

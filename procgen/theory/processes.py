@@ -26,6 +26,8 @@ AT_ONCE = 1 << 14
 class Process:
     """One process: what it is made of (`ingredients`, expressions), its moments, and what verdicts it adds."""
 
+    discrete = False  # whether it takes few values
+
     def __init__(self, name: str, ingredients: tuple[Any, ...], says: tuple[tuple[str, str], ...] = ()):
         self.name, self.ingredients, self.says = name, ingredients, says
         self.highest_moment = np.inf
@@ -53,6 +55,8 @@ class Process:
 
 class Chain(Process):
     """A stationary chain of two states, 1 with probability p: Cov = p (1 - p) r^|t - s| (Feller 1968, XV.1)."""
+
+    discrete = True
 
     def __init__(self, name: str, ingredients: tuple[Any, ...], p: float, r: float):
         super().__init__(name, ingredients)

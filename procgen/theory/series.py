@@ -11,6 +11,7 @@ import numpy as np
 from procgen.theory import fourth, laws
 from procgen.theory.covariance import condition
 from procgen.theory.expression import Expression
+from procgen.theory.sources import PROCESS
 from procgen.theory.system import System, system_of
 from procgen.theory.unknown import Unknown
 from procgen.theory.verdict import Stationarity, judge
@@ -70,6 +71,12 @@ class SeriesTheory:
     def gaussian(self) -> bool:
         """Whether the series at any steps is jointly Gaussian."""
         return laws.is_gaussian(self.expression)
+
+    @cached_property
+    def discrete(self) -> bool:
+        """Whether chance only chooses among few values, as for a flag."""
+        sources = self.expression.sources
+        return bool(sources) and all(s.kind == PROCESS and s.detail.discrete for s in sources)
 
     def marginal(self, step: int) -> Any | None:
         """The law at one step as a frozen SciPy distribution."""
