@@ -26,7 +26,6 @@ from functools import cache, cached_property, update_wrapper
 from hashlib import sha256
 from importlib.util import find_spec
 from pathlib import Path
-from types import FunctionType
 from typing import Any, Literal
 
 import numpy as np
@@ -63,7 +62,7 @@ def compiling(wanted: bool = True) -> Iterator[None]:
 class Kernel:
     """A recursion that can be called like the function it was written as; see the module text."""
 
-    def __init__(self, function: FunctionType) -> None:
+    def __init__(self, function: Callable[..., Any]) -> None:
         update_wrapper(self, function)
         self.plain = function
 
@@ -105,7 +104,7 @@ class Kernel:
         return dimensions
 
 
-def kernel(function: FunctionType) -> Kernel:
+def kernel(function: Callable[..., Any]) -> Kernel:
     """Make a kernel of a function written in the plain subset (decorator)."""
     return Kernel(function)
 

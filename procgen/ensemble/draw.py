@@ -32,7 +32,7 @@ class Drawer:
 
         Raises EnsembleError when a value is not finite, naming series, path and step.
         """
-        with kernel.compiling(self.compile):
+        with kernel.compiling(self.compile or kernel.is_compiling()):
             for block in lanes(batch, self.source.depth):
                 rows = slice(block.first_path - batch.first_path, block.end_path - batch.first_path)
                 self._rows(block, {name: values[rows] for name, values in out.items()})

@@ -1,0 +1,36 @@
+"""Digests of every gallery spec at a small size: `python -m tests.golden_specs` prints them as JSON.
+
+With --write they are written to tests/golden/specs.json. A new spec adds a line; a line that changes is a change
+of every user's values, which is right only with a new stream version, or before a first release.
+"""
+
+from __future__ import annotations
+
+import json
+import sys
+from pathlib import Path
+
+import procgen as pg
+from procgen.chance.kernel import compiling
+
+ROOT = Path(__file__).parent.parent
+FILE = ROOT / "tests" / "golden" / "specs.json"
+
+
+def digests(compiled: bool = False) -> dict[str, str]:
+    """The ensemble digest of 40 paths and at most 60 steps of each gallery spec, by name."""
+    found = {}
+    for file in sorted((ROOT / "specs").glob("*.yaml")):
+        spec = pg.load(file).changed(paths=40)
+        spec = spec.changed(steps=min(60, spec.time.steps))
+        with compiling(compiled):
+            found[file.stem] = pg.render(spec).digest
+    return found
+
+
+if __name__ == "__main__":
+    text = json.dumps(digests(), indent=1) + "\n"
+    if "--write" in sys.argv:
+        FILE.write_text(text)
+    else:
+        print(text)
