@@ -22,7 +22,7 @@ def offsets(zone: str, utc: np.ndarray) -> np.ndarray:
     if not utc.size:
         return np.zeros(utc.shape, np.int64)
     years = np.clip((utc // DAY).astype("datetime64[D]").astype("datetime64[Y]").astype(int) + 1970, _FIRST, _LAST)
-    spans = [_year(zone, year) for year in range(int(years.min()), int(years.max()) + 1)]
+    spans = [_year(zone, year) for year in np.unique(years).tolist()]
     begins, sizes = (np.concatenate(parts) for parts in zip(*spans, strict=True))
     return sizes[np.maximum(np.searchsorted(begins, utc, side="right") - 1, 0)]
 
