@@ -18,7 +18,16 @@ from procgen.chance.streams import STREAM_VERSION, Stream
 
 FILE = Path(__file__).parent.parent / "golden" / "chance.json"
 STREAM = Stream(271828, "load_kw", "swing", "innovation")
-PARAMETERS = {"student_t": {"df": 4.5}, "mixture": {"weight": 0.05, "ratio": 4, "shift": 0.5}}
+PARAMETERS = {
+    "student_t": {"df": 4.5},
+    "mixture": {"weight": 0.05, "ratio": 4, "shift": 0.5},
+    "skewed_t": {"df": 4.5, "skew": -0.3},
+    "ged": {"shape": 1.3},
+    "skew_normal": {"alpha": 3},
+    "gamma": {"shape": 1.5},
+    "lognormal": {"sigma": 0.5},
+    "normal_mixture": {"components": ((0.6, -1, 0.5), (0.3, 0, 1), (0.1, 2, 3))},
+}
 
 
 @kernel

@@ -4,12 +4,43 @@ from collections.abc import Mapping
 from types import MappingProxyType
 
 from procgen.chance.laws.base import Law
+from procgen.chance.laws.components import NormalMixture
+from procgen.chance.laws.ged import GED
 from procgen.chance.laws.mixture import Mixture
+from procgen.chance.laws.positive import Gamma, Lognormal
 from procgen.chance.laws.simple import Laplace, Logistic, Normal, Uniform
+from procgen.chance.laws.skewed import SkewedT, SkewNormal
 from procgen.chance.laws.student import StudentT
 
-__all__ = ["LAWS", "Laplace", "Law", "Logistic", "Mixture", "Normal", "StudentT", "Uniform"]
+__all__ = [
+    "GED",
+    "LAWS",
+    "Gamma",
+    "Laplace",
+    "Law",
+    "Logistic",
+    "Lognormal",
+    "Mixture",
+    "Normal",
+    "NormalMixture",
+    "SkewNormal",
+    "SkewedT",
+    "StudentT",
+    "Uniform",
+]
 
-LAWS: Mapping[str, type[Law]] = MappingProxyType(
-    {law.name: law for law in (Normal, StudentT, Laplace, Logistic, Uniform, Mixture)}
+_ALL: tuple[type[Law], ...] = (
+    Normal,
+    StudentT,
+    SkewedT,
+    GED,
+    Laplace,
+    Logistic,
+    Uniform,
+    SkewNormal,
+    Gamma,
+    Lognormal,
+    Mixture,
+    NormalMixture,
 )
+LAWS: Mapping[str, type[Law]] = MappingProxyType({law.name: law for law in _ALL})

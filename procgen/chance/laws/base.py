@@ -92,6 +92,11 @@ class Law:
         fourth = self.moment(4)
         return None if fourth is None else fourth - 3.0
 
+    @property
+    def exponential_moments(self) -> tuple[float, float]:
+        """The rates q below which E exp(q abs(z)) over the lower and over the upper side is finite."""
+        return (math.inf, math.inf) if math.isinf(self.highest_moment) else (0.0, 0.0)
+
     def distribution(self) -> Any:
         """The law as a frozen SciPy distribution: pdf, cdf, sf, ppf, isf, moment."""
         raise NotImplementedError

@@ -53,51 +53,78 @@ class Mixture(Law):
         _inverse(self).quantile(p, side, out, scratch)
 
     def moment(self, k: int) -> float:
-        return sum(
-            w * math.comb(k, j) * mean ** (k - j) * sd**j * math.prod(range(1, j, 2))
-            for w, mean, sd in self.components
-            for j in range(0, k + 1, 2)
-        )
+        return Normals(self.components).moment(k)
 
     def distribution(self) -> Any:
         return _distribution(self)
 
     def _landmarks(self) -> tuple[float, ...]:
-        return tuple(sorted({0.0, *(mean + i * sd for _, mean, sd in self.components for i in _MARKS)}))
+        return Normals(self.components).landmarks
 
 
 @lru_cache(maxsize=64)
 def _inverse(law: Mixture) -> Inverse:
-    def density(z: np.ndarray) -> np.ndarray:
-        total = np.zeros_like(z)
-        for w, mean, sd in law.components:
-            far = (z - mean) / sd
-            total += exp(far * far * -0.5) * (w / sd)
-        return total
-
-    reach = max(abs(mean) + _FURTHEST * sd for _, mean, sd in law.components)
-    marks = law._landmarks()
-    if law.shift == 0.0:
-        return Inverse(Areas(density, reach, marks))
-    return Inverse(Areas(density, reach, marks), Areas(lambda z: density(-z), reach, [-mark for mark in marks]))
+    return Normals(law.components).inverse(law.shift == 0.0)
 
 
 @lru_cache(maxsize=64)
 def _distribution(law: Mixture) -> Any:
-    from scipy.special import ndtr
-    from scipy.stats import norm, rv_continuous
+    return Normals(law.components).distribution()
 
-    class TwoNormals(rv_continuous):
-        def _pdf(self, x):
-            return sum(w * norm.pdf(x, mean, sd) for w, mean, sd in law.components)
 
-        def _cdf(self, x):
-            return sum(w * ndtr((x - mean) / sd) for w, mean, sd in law.components)
+@dataclass(frozen=True)
+class Normals:
+    """Several normals, as (weight, mean, standard deviation); the weights add up to 1."""
 
-        def _sf(self, x):
-            return sum(w * ndtr((mean - x) / sd) for w, mean, sd in law.components)
+    parts: tuple[tuple[float, float, float], ...]
 
-        def _munp(self, n):
-            return law.moment(int(n))
+    @property
+    def landmarks(self) -> tuple[float, ...]:
+        """Points around each of them, close enough for a quadrature to see the narrow ones."""
+        return tuple(sorted({0.0, *(mean + i * sd for _, mean, sd in self.parts for i in _MARKS)}))
 
-    return TwoNormals(name="mixture")()
+    def inverse(self, symmetric: bool) -> Inverse:
+        """The quantile of their mixture."""
+
+        def density(z: np.ndarray) -> np.ndarray:
+            total = np.zeros_like(z)
+            for w, mean, sd in self.parts:
+                far = (z - mean) / sd
+                total += exp(far * far * -0.5) * (w / sd)
+            return total
+
+        reach = max(abs(mean) + _FURTHEST * sd for _, mean, sd in self.parts)
+        marks = self.landmarks
+        if symmetric:
+            return Inverse(Areas(density, reach, marks))
+        return Inverse(Areas(density, reach, marks), Areas(lambda z: density(-z), reach, [-mark for mark in marks]))
+
+    def moment(self, k: int) -> float:
+        """E z^k."""
+        return sum(
+            w * math.comb(k, j) * mean ** (k - j) * sd**j * math.prod(range(1, j, 2))
+            for w, mean, sd in self.parts
+            for j in range(0, k + 1, 2)
+        )
+
+    def distribution(self) -> Any:
+        """Their mixture as a frozen SciPy distribution."""
+        from scipy.special import ndtr
+        from scipy.stats import norm, rv_continuous
+
+        parts, moment = self.parts, self.moment
+
+        class Mixed(rv_continuous):
+            def _pdf(self, x):
+                return sum(w * norm.pdf(x, mean, sd) for w, mean, sd in parts)
+
+            def _cdf(self, x):
+                return sum(w * ndtr((x - mean) / sd) for w, mean, sd in parts)
+
+            def _sf(self, x):
+                return sum(w * ndtr((mean - x) / sd) for w, mean, sd in parts)
+
+            def _munp(self, n):
+                return moment(int(n))
+
+        return Mixed(name="mixture")()

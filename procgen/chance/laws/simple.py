@@ -60,6 +60,10 @@ class Laplace(Law):
     def moment(self, k: int) -> float:
         return 0.0 if k % 2 else math.factorial(k) / 2.0 ** (k // 2)
 
+    @property
+    def exponential_moments(self) -> tuple[float, float]:
+        return 1 / _ROOT_HALF, 1 / _ROOT_HALF
+
     def distribution(self) -> Any:
         from scipy.stats import laplace
 
@@ -84,6 +88,10 @@ class Logistic(Law):
         if k % 2 or k == 0:
             return float(k == 0)
         return 2 * math.factorial(k) * (1 - 2.0 ** (1 - k)) * float(zeta(k)) * _ROOT_3_PER_PI**k
+
+    @property
+    def exponential_moments(self) -> tuple[float, float]:
+        return 1 / _ROOT_3_PER_PI, 1 / _ROOT_3_PER_PI
 
     def distribution(self) -> Any:
         from scipy.stats import logistic
