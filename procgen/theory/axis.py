@@ -3,12 +3,13 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
 
 from procgen.theory import known, markov
+from procgen.theory.chains import States, Switching
 from procgen.theory.expression import Expression, opaque, product
 from procgen.theory.garch import Garch
 from procgen.theory.known import Known
@@ -102,6 +103,7 @@ class Axis:
 
         The past is oldest first; values and shocks before step 0 that are not given count as not defined.
         """
+        noise = _white(noise)
         phi, theta = _trimmed(phi), _trimmed(theta)
         started = before_x is not None
         total: dict[At, float] = {}
@@ -126,6 +128,7 @@ class Axis:
 
     def walk(self, noise: Expression, drift: float, start: float) -> Expression:
         """x(0) = start, x(t) = x(t-1) + drift + a(t), followed backwards below step 0."""
+        noise = _white(noise)
         drifting = Expression(self.space, known.constant(float(drift))) + noise
         walk = drifting.integrate(float(start))
         return Expression(self.space, walk.mean_path, walk.linear, walk.terms, noise.outputs)
@@ -142,8 +145,22 @@ class Axis:
 
         Stationary with the given shares, or from state `start` at step 0.
         """
-        chain = markov.States(transitions, shares, start)
+        chain = States(transitions, shares, start)
         return markov.number_of_state(self._process, self.source(key, law, 1.0), key, chain, names)
+
+    def switching(self, key: str, law: Any, spreads: Sequence[float], *chain: Any) -> Expression:
+        """Shocks with a spread for each state of a chain of their own, given as for `states`; filters take them too."""
+        z, state = self.source(key, law, 1.0), self.states(f"{key}.regime", law, *chain)
+        squares = self.known(lambda t: np.full(np.shape(t), float(spreads[0]) ** 2), constant=True)
+        total = z * float(spreads[0])
+        for k, spread in enumerate(spreads[1:], start=1):
+            in_state = state.hidden(f"state {k}")
+            total = total + self.product([in_state, z * (spread - spreads[0])])
+            squares = squares + in_state * (spread**2 - spreads[0] ** 2)
+        behind = frozenset(root for x in (z, state) for source in x.sources for root in roots(source))
+        process = Switching(law, np.array(spreads), States(*chain[:3]))
+        white = self.space.add(Source(f"{key} switching", GARCH, process.variance, law, detail=process, depends=behind))
+        return self.offering(total, regime=state, variance=squares, white=self._noise(white))
 
     def offering(self, x: Expression, **outputs: Expression) -> Expression:
         """x, with hidden outputs."""
@@ -248,6 +265,11 @@ class Axis:
         if mean.level or mean.slope or any(piece.key[0] != "past" for piece in mean.pieces):
             raise Unknown("a filter that starts from a given past, of a noise with a mean")
         return _forecast(self.name, phi, theta, tuple(before_x), tuple(before_shocks or ()))
+
+
+def _white(noise: Expression) -> Expression:
+    """A noise that is no linear form, as the one white source that stands for it in filters."""
+    return replace(noise.hidden("white"), outputs=noise.outputs) if "white" in noise.outputs else noise
 
 
 def squares_of(space: Space, source: Source) -> Source:

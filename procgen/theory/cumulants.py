@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import numpy as np
 
+from procgen.theory.chains import Switching
 from procgen.theory.covariance import covariance
 from procgen.theory.linear import At, Base, Linear
 from procgen.theory.sources import Source, Space
@@ -59,8 +60,10 @@ def _quadratic(p: np.ndarray, q: np.ndarray, covariances: np.ndarray) -> float:
 
 
 def square_covariance(space: Space, source: Source, lags: np.ndarray) -> np.ndarray:
-    """Cov(e(t + lag)^2, e(t)^2) of a garch that is in its stationary law."""
+    """Cov(e(t + lag)^2, e(t)^2) of a garch in its stationary law, or of a switching noise."""
     process = source.detail
+    if isinstance(process, Switching):
+        return process.square_covariance(lags)
     if not np.isfinite(process.shock_variance):
         raise Unknown(f"infinite fourth moment of {source.key}")
     base = Base(Source("squares", "squares", process.shock_variance, owner=source), process.persistence)

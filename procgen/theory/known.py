@@ -30,6 +30,7 @@ class Piece:
     at: Function = field(compare=False, repr=False)
     periods: frozenset[float] | None = field(default=None, compare=False)
     note: str = field(default="", compare=False)
+    settles: bool = field(default=False, compare=False)  # whether it comes to rest, away from a given start
 
     @property
     def cycle(self) -> int | None:
@@ -44,7 +45,7 @@ class Piece:
             return self.key[3].lag(by + self.key[1])
         by = by % self.cycle if self.cycle else by
         key = ("lag", by, self.key, self)
-        return Piece(key, lambda steps: self.at(steps - by), self.periods, self.note) if by else self
+        return Piece(key, lambda steps: self.at(steps - by), self.periods, self.note, self.settles) if by else self
 
 
 @dataclass(frozen=True)
@@ -78,6 +79,11 @@ class Known:
                 return None
             whole |= piece.periods
         return None if self.slope else whole
+
+    @property
+    def settles(self) -> bool:
+        """Whether it moves only because of a given start, which it leaves."""
+        return not self.slope and all(piece.settles for piece in self.pieces)
 
     @property
     def notes(self) -> tuple[str, ...]:
@@ -164,9 +170,15 @@ def constant(value: float) -> Known:
     return Known(float(value))
 
 
-def whole(key: tuple, at: Function, periods: frozenset[float] | None = None, note: str = "a known path") -> Known:
+def whole(
+    key: tuple,
+    at: Function,
+    periods: frozenset[float] | None = None,
+    note: str = "a known path",
+    settles: bool = False,
+) -> Known:
     """A function of one piece."""
-    return Known(pieces={Piece(key, at, periods, note): 1.0})
+    return Known(pieces={Piece(key, at, periods, note, settles): 1.0})
 
 
 def observed(key: tuple, at: Function, horizon: int, name: str, period: float | None = None) -> Known:

@@ -134,7 +134,7 @@ class Space:
 
 def roots(source: Source) -> Iterable[Source]:
     """The primary sources behind a source."""
-    return source.depends if source.kind in (OPAQUE, PROCESS) else (source.owner or source,)
+    return source.depends or (source.owner or source,)
 
 
 def _named(source: Source) -> str:

@@ -98,7 +98,9 @@ def _term(findings: _Findings, term: Term) -> None:
     for factor in term.knowns:
         cyclic = factor.periods is not None
         why = "; ".join(factor.notes) or "a known path"
-        if cyclic:
+        if factor.settles:
+            findings.say(SETTLES, f"a random part is multiplied by what settles ({why})")
+        elif cyclic:
             findings.say(CYCLES, f"a random part is multiplied by a pattern ({why})")
         else:
             findings.say(VARIES, f"a random part is multiplied by a known path ({why})")

@@ -184,6 +184,12 @@ def chaining(values: dict, x: float) -> dict:
     return {"states": ["n1", "n2"]} | moving({}, x)
 
 
+def switching_spread(values: dict, x: float) -> dict:
+    """Two spreads, and how they follow each other."""
+    moves = {name: value for name, value in moving({}, x).items() if name != "start"}
+    return {"sd": {"n1": x, "n2": 1.5}, "law": values.get("law", "normal")} | moves
+
+
 def branching(values: dict, x: float) -> dict:
     """Two branches, and how they follow each other."""
     return {"branches": dict(values["branches"])} | moving(values, x)
@@ -222,6 +228,7 @@ MEND = {
     "calendar": counting,
     "flag": switching,
     "chain": chaining,
+    "switching_noise": switching_spread,
     "regimes": branching,
     "clip": bounded,
     "sigmoid": bounded,

@@ -26,6 +26,11 @@ RICH = {
     "before_arma": "{arma: {phi: 0.9, theta: 0.5, sd: 1, before: {x: [4], shocks: [0.5]}}}",
     "before_garch": "{garch: {omega: 0.1, alpha: 0.1, beta: 0.8, before: {variance: [4], shocks: [2]}}}",
     "before_walk": "{random_walk: {sd: 2, drift: 1, before: {x: [100]}}}",
+    "switching_ar": "{ar: {phi: [0.6, 0.2], shock: {switching_noise: {sd: {a: 1, b: 3}, durations: {a: 9, b: 3}}}}}",
+    "started_regimes": "{regimes: {branches: {a: [{ar: {phi: 0.6, sd: 1}}], b: [{constant: 4}], c: [{random_walk: "
+    "{sd: 1}}]}, transitions: [[0.8, 0.1, 0.1], [0, 0.5, 0.5], [0.3, 0.7, 0]], start: b}}",
+    "lagged_regimes": "{lag: {of: [{regimes: {branches: {a: [{ar: {phi: 0.6, sd: 1}}], b: [{garch: {sd: 2, alpha: "
+    "0.1}}]}, durations: {a: 9, b: 3}}}], by: 5}}",
     "lagged": "{lag: {of: [{ar: {phi: [0.6, 0.2], sd: 1}}, {constant: 3}], by: 7}}",
     "deep_arma_lag": "{lag: {of: [{arma: {phi: 0.6, theta: [0.2, 0.1], sd: 1}}], by: 9}}",
     "lagged_walk": "{lag: {of: [{random_walk: {sd: 1, drift: 0.2, start: 3}}], by: 4}}",
