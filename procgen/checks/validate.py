@@ -97,7 +97,12 @@ def plan_of(spec: Any, steps: int | None = None) -> Plan:
 
 
 def grain_of(declared: Any, theory: Any, steps: int) -> float:
-    """The distance of neighbouring values as stored: of decimals, whole numbers, or float32."""
+    """The distance of neighbouring values as stored: of decimals, whole numbers, or float32.
+
+    0 where chance only chooses among few values: rounding then spreads nothing, least of all over a cell.
+    """
+    if theory.discrete:
+        return 0.0
     if declared.decimals is not None or declared.type == "int64":
         return 10.0 ** -(declared.decimals or 0)
     if declared.type == "float32":
