@@ -61,7 +61,8 @@ class Before:
     head : int
         How many of its own values before step 0 somebody will read.
     inputs : tuple of arrays (n_i, paths)
-        The inputs at steps -n_i .. -1, oldest first; n_i is at least ``reach(head)[i]``.
+        The inputs at steps -n_i .. -1, oldest first; n_i is at least ``reach(head)[i]``. A term that `burns_in`
+        may get something that only has a length and slices, each drawn when it is asked for.
     peek : callable
         ``peek(i)`` gives input i at step 0, (1, paths).
     normals : callable
@@ -93,6 +94,7 @@ class Term:
     composition: ClassVar[bool] = False
     separate: ClassVar[bool] = False  # whether each entry of its body is an input of its own
     outputs: ClassVar[tuple[str, ...]] = ()
+    burns_in: ClassVar[bool] = False  # whether `begin` reads its inputs from the first row on, a few rows at a time
     portable: ClassVar[bool] = True
     why_not_portable: ClassVar[str] = ""
 

@@ -13,6 +13,7 @@ from procgen.terms.base import LAW, Ahead, Draw, Term, number, rows, signed, wit
 from procgen.terms.start import companion, decay_length
 
 FORGOTTEN = 1e-9
+BURN_TILE = 128  # steps of a burn-in drawn at once, few enough to stay in cache
 
 
 @kernel
@@ -83,6 +84,20 @@ BEFORE = Parameter(
 )
 
 
+def burnt_in(term, before, state):
+    """Values at steps -head .. -1 and the state at step 0, from `state` through the term's burn-in, tile by tile."""
+    (count,) = term.reach(before.head)
+    z, kept = before.inputs[0], []
+    for first in range(len(z) - count, len(z), BURN_TILE):
+        values, state = term.recurse((z[first : min(first + BURN_TILE, len(z))],), state, None)
+        if first + BURN_TILE > len(z) - before.head:
+            kept.append(values)
+    if not before.head:
+        return None, state
+    rows = {name: np.concatenate([part[name] for part in kept]) for name in kept[0]}
+    return {name: part[len(part) - before.head :] for name, part in rows.items()}, state
+
+
 class Garch(Term):
     kind = "garch"
     family = "volatility"
@@ -91,6 +106,7 @@ class Garch(Term):
     example = "garch: {sd: 6.3, alpha: 0.1, beta: 0.85}"
     knows = "variance, kurtosis and autocorrelation of squares where they exist; uncorrelated, not independent"
     noise = True
+    burns_in = True
     outputs = ("variance",)
     parameters: ClassVar[tuple[Parameter, ...]] = (OMEGA, SD, ALPHA, BETA, LAW, INFINITE, BEFORE)
 
@@ -182,10 +198,7 @@ class Garch(Term):
             return values, {"square": square[len(square) - p :], "h": h[len(h) - q :]}
         rest = self.resting()
         state = {"square": np.full((p, 1), rest), "h": np.full((q, 1), rest)}
-        (count,) = self.reach(before.head)
-        z = before.inputs[0][len(before.inputs[0]) - count :]
-        values, state = self.recurse((z,), state, None)
-        return {name: rows[count - before.head :] for name, rows in values.items()}, state
+        return burnt_in(self, before, state)
 
     def recurse(self, inputs, state, at):
         z = inputs[0]

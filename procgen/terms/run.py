@@ -112,15 +112,24 @@ class Run:
     def _begin(self) -> None:
         for node in self._order:
             if isinstance(node, Source):
-                head = max(s.head for s in (node.group.sources if node.group else (node,)))
-                if head and id(node) not in self._begun:
-                    self._draw(node, -head, head, self._begun)
+                self._begin_source(node)
             elif isinstance(node.term, Hidden):
                 self._begun[id(node)] = self._begun.get((id(node.inputs[0]), node.term.output))
             else:
                 self._begin_node(node)
         self._begun.clear()
         self._joint.clear()
+
+    def _begin_source(self, source: Source) -> None:
+        if id(source) in self._begun:
+            return
+        if source.group is None and all(reader.term.burns_in for reader in self._readers(source)):
+            self._begun[id(source)] = _Past(self, source)
+        elif head := max(s.head for s in (source.group.sources if source.group else (source,))):
+            self._draw(source, -head, head, self._begun)
+
+    def _readers(self, source: Source) -> list[Node]:
+        return [node for node in self._order if any(part is source for part in node.inputs)]
 
     def _begin_node(self, node: Node) -> None:
         before = Before(
@@ -174,3 +183,19 @@ class Run:
         while not isinstance(node, Source):
             node = node.inputs[-1]
         return node
+
+
+class _Past:
+    """The rows of a source before step 0, drawn slice by slice as a burn-in asks for them."""
+
+    def __init__(self, run: Run, source: Source):
+        self._run, self._source = run, source
+
+    def __len__(self) -> int:
+        return self._source.head
+
+    def __getitem__(self, rows: slice) -> Array:
+        first, end, _ = rows.indices(len(self))
+        drawn: dict[int, Array] = {}
+        self._run._draw(self._source, first - len(self), end - first, drawn)
+        return drawn[id(self._source)]
