@@ -25,7 +25,7 @@ def switch(z, out, on, enter, stay):
 class Flag(Term):
     kind = "flag"
     family = "level and shape"
-    purpose = "1 or 0: on by dates, or by chance for a share of the time and some steps in a row"
+    purpose = "1 while something is on and 0 while it is off: by dates, or by chance for some steps in a row"
     source = "Feller (1968), ch. XV, for the chain of two states"
     example = "flag: {share: 0.2, stay: 5}"
     knows = "mean and covariance: share·(1 − share)·r^|lag|, r = 1 − P(on → off) − P(off → on)"

@@ -58,7 +58,7 @@ class LogisticTrend(Known):
 class DampedTrend(Known):
     kind = "damped_trend"
     family = "level and shape"
-    purpose = "a line whose slope fades by a factor a step, to a last level; before step 0 it is straight"
+    purpose = "a line whose slope fades by a factor each step; before step 0 it is straight"
     source = "Gardner & McKenzie (1985)"
     example = "damped_trend: {level: 50, slope: 2, damping: 0.95}"
     knows = "mean; no variance"

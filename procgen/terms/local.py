@@ -81,7 +81,7 @@ class Annual(Known):
 class Holidays(Known):
     kind = "holidays"
     family = "level and shape"
-    purpose = "a shift on listed days of the local calendar, and if wanted on the days beside them"
+    purpose = "a shift on listed days of the local calendar; if wanted, on the days beside them too"
     source = "common practice, no source"
     example = "holidays: {days: [2027-01-05, 12-25], size: -30, day_before: -8}"
     knows = "mean; no variance"
