@@ -33,6 +33,14 @@ def steps_of(text: str) -> tuple[int, ...]:
     return tuple(int(part) for part in parts)
 
 
+def column_of(text: str) -> tuple[str, str]:
+    """Series and column from `load_kw=load`."""
+    series, given, column = text.partition("=")
+    if not (series and given and column):
+        raise typer.BadParameter(f"expected SERIES=NAME such as load_kw=load, got {text!r}", param_hint="--series-col")
+    return series, column
+
+
 @app.command(
     short_help="Draw paths of a spec.",
     epilog="\b\nExample:\n  procgen render specs/pump-flow.yaml -o build/pump-flow --paths 5000",
@@ -89,7 +97,8 @@ def render(
 @app.command(
     short_help="Compare paths with the theory of their spec.",
     epilog="\b\nExamples:\n  procgen validate build/pump-flow\n"
-    "  procgen validate mine.csv --spec specs/pump-flow.yaml --path-col run --step-col hour",
+    "  procgen validate mine.csv --spec specs/pump-flow.yaml --path-col run --step-col hour\n"
+    "  procgen validate mine.csv --spec specs/pump-flow.yaml --path-col run --time-col at --series-col flow=litres",
 )
 @guarded
 def validate(
@@ -100,6 +109,11 @@ def validate(
     spec: Annotated[Path | None, typer.Option(metavar="SPEC", help="The spec that DATA should follow.")] = None,
     path_col: Annotated[str | None, typer.Option(metavar="NAME", help="Column of DATA with the path.")] = None,
     step_col: Annotated[str | None, typer.Option(metavar="NAME", help="Column of DATA with the step.")] = None,
+    time_col: Annotated[str | None, typer.Option(metavar="NAME", help="Column of DATA with the time instead.")] = None,
+    series_col: Annotated[
+        list[str] | None,
+        typer.Option(metavar="SERIES=NAME", help="Column of DATA with a series; may be given again for others."),
+    ] = None,
     false_alarm: Annotated[
         float, typer.Option(metavar="P", help="Chance of a false alarm over all checks.", min=1e-12, max=0.5)
     ] = 0.001,
@@ -113,7 +127,8 @@ def validate(
     import procgen as pg
     from procgen.report.rendered import verdict_json
 
-    columns = {role: name for role, name in (("path", path_col), ("step", step_col)) if name is not None}
+    roles = {"path": path_col, "step": step_col, "time": time_col}
+    columns = {role: name for role, name in roles.items() if name is not None} | dict(map(column_of, series_col or ()))
     stated = None if spec is None else pg.load(spec)
     with progress("reading") as tick:
         verdict = pg.validate(data, stated, false_alarm, columns or None, tick)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+import signal
 import sys
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
@@ -33,7 +34,14 @@ def guarded(command: Callable[..., None]) -> Callable[..., None]:
 
 
 def run(app: typer.Typer) -> NoReturn:
-    """Run the app and end the process with its exit code, without a traceback whatever happens."""
+    """Run the app and end the process with its exit code, without a traceback whatever happens.
+
+    The matrices here are small: threads of a linear algebra library only wait for each other, and much so beside
+    other work. Being asked to end is taken as Ctrl-C is, so that a render stops between two parts.
+    """
+    for library in ("OPENBLAS", "OMP", "MKL"):
+        os.environ.setdefault(f"{library}_NUM_THREADS", "1")
+    signal.signal(signal.SIGTERM, signal.default_int_handler)
     try:
         app()
     except KeyboardInterrupt:  # before or after the command itself

@@ -14,6 +14,7 @@ from pathlib import Path
 import numpy as np
 import pyarrow as pa
 import pyarrow.parquet as pq
+import pandas as pd
 import pytest
 from typer.testing import CliRunner
 
@@ -65,7 +66,7 @@ def test_help_names_every_command_and_shows_an_example_of_each():
 def test_the_options_are_those_that_were_promised():
     promised = {
         "render": "-o --paths --first-path --steps --seed --workers --layout --reveal --resume --overwrite --scheduler",
-        "validate": "--spec --path-col --step-col --false-alarm --json --report",
+        "validate": "--spec --path-col --step-col --time-col --series-col --false-alarm --json --report",
         "theory": "--json --at --lags",
         "digest": "--expect --redraw",
     }
@@ -151,13 +152,26 @@ def test_validate_ends_with_0_1_or_2(rendered, tmp_path):
     assert Result("validate", str(tmp_path / "few")).code in (0, 2)
 
 
+def test_validate_reads_a_strangers_table_by_its_own_names(rendered, tmp_path):
+    part = next(rendered.glob("*.parquet"))
+    frame = pd.read_parquet(part).rename(columns={"path": "run", "time": "at", "flow": "litres"})
+    frame.drop(columns="step").sample(frac=1, random_state=1).to_csv(tmp_path / "mine.csv", index=False)
+    call = ["validate", str(tmp_path / "mine.csv"), "--spec", str(ROOT / "specs" / "pump-flow.yaml")]
+    call += ["--path-col", "run", "--time-col", "at"]
+    # False-alarm probability 1e-8 of the suite's 1e-6.
+    assert Result(*call, "--series-col", "flow=litres", "--false-alarm", "1e-8").code == 0
+    unnamed = Result(*call)
+    assert unnamed.code == 2 and "has no column 'flow' for flow; its columns are run, at, litres" in unnamed.err
+    assert "expected SERIES=NAME such as load_kw=load, got 'flow'" in Result(*call, "--series-col", "flow").err
+
+
 def test_terms_have_a_line_each_and_every_one_has_a_page():
     from procgen.chance.laws import LAWS
     from procgen.terms import catalogue
 
     screen = Result("terms").out
     families = {term.family for term in catalogue().values()}
-    assert len(screen.splitlines()) <= len(catalogue()) + 2 * len(families) + 4
+    assert len(screen.splitlines()) <= len(catalogue()) + 2 * len(families) + 8  # a few lines of laws
     assert max(map(len, screen.splitlines())) <= 100
     for name in [*catalogue(), *LAWS]:
         assert name in screen
