@@ -91,8 +91,8 @@ def _rows(rows: Sequence[Sequence[float]], names: Sequence[str]) -> Iterable[Iss
         )
         return
     for name, row in zip(names, rows, strict=True):
-        if abs(sum(row) - 1.0) > ROW_ERROR:
-            yield "transitions", f"expected the row of {name} to add up to 1, got {number(sum(row))}"
+        if abs(added(row) - 1.0) > ROW_ERROR:
+            yield "transitions", f"expected the row of {name} to add up to 1, got {number(added(row))}"
 
 
 def matrix(values: Mapping[str, Any], names: Sequence[str]) -> Array:
@@ -135,24 +135,23 @@ def occupancy(p: Array) -> Array | None:
         return None
     a = p[np.ix_(closed, closed)].copy()
     for n in range(len(a) - 1, 0, -1):
-        out = 0.0
-        for j in range(n):
-            out = out + a[n, j]
-        a[:n, n] = a[:n, n] / out
+        a[:n, n] = a[:n, n] / added(a[n, :n])
         for j in range(n):
             a[:n, j] = a[:n, j] + a[:n, n] * a[n, j]
     weights = [1.0]
     for n in range(1, len(a)):
-        w = 0.0
-        for i in range(n):
-            w = w + weights[i] * a[i, n]
-        weights.append(w)
-    total = 0.0
-    for w in weights:
-        total = total + w
+        weights.append(added([weights[i] * a[i, n] for i in range(n)]))
     shares = np.zeros(len(p))
-    shares[closed] = np.array(weights) / total
+    shares[closed] = np.array(weights) / added(weights)
     return shares
+
+
+def added(parts: Iterable[Any]) -> Any:
+    """The sum of numbers or arrays, from left to right."""
+    total = 0.0
+    for part in parts:
+        total = total + part
+    return total
 
 
 def _reachable(p: Array) -> Array:
@@ -215,7 +214,7 @@ class States:
         rows = []
         for h in range(steps):
             if h or "s" in state:
-                now = np.stack([sum(now[i] * self.p[i, j] for i in range(len(self.p))) for j in range(len(self.p))])
+                now = np.stack([added([row * p for row, p in zip(now, column, strict=True)]) for column in self.p.T])
             rows.append(now)
         return np.stack(rows, axis=1)
 
@@ -273,7 +272,8 @@ class Chain(Term):
 
     def ahead(self, steps, state, *inputs):
         chances = self.chain.chances(len(steps), state)
-        mean, square = (sum(float(i) ** k * c for i, c in enumerate(chances)) for k in (1, 2))
+        powers = [[float(i) for i in range(len(chances))], [float(i * i) for i in range(len(chances))]]
+        mean, square = (added([weight * c for weight, c in zip(weights, chances, strict=True)]) for weights in powers)
         return Ahead(mean, np.maximum(square - mean * mean, 0.0))
 
     def moments(self, axis, *inputs):

@@ -101,9 +101,9 @@ class Regimes(Term):
         if self.chain is None:
             return Unknown("regimes that follow another series have no closed forecast")
         chances = self.chain.chances(len(steps), state)
-        mean = sum(c * x.mean for c, x in zip(chances, inputs, strict=False))
-        square = sum(c * (x.variance + (x.mean - mean) ** 2) for c, x in zip(chances, inputs, strict=False))
-        return Ahead(mean, square)
+        mean = markov.added([c * x.mean for c, x in zip(chances, inputs, strict=False)])
+        spread = [c * (x.variance + (x.mean - mean) ** 2) for c, x in zip(chances, inputs, strict=False)]
+        return Ahead(mean, markov.added(spread))
 
     def moments(self, axis, *inputs):
         branches, state = inputs[: len(self.branches)], inputs[-1]

@@ -39,10 +39,8 @@ class SwitchingNoise(Term):
 
     def scale(self):
         """Unconditional standard deviation, in the series' unit."""
-        total = 0.0
-        for share, spread in zip(self.chain.shares, self.spreads, strict=True):
-            total = total + share * (spread * spread)
-        return float(np.sqrt(total))
+        squares = [share * (spread * spread) for share, spread in zip(self.chain.shares, self.spreads, strict=True)]
+        return float(np.sqrt(markov.added(squares)))
 
     def as_member(self):
         """None: a past whose spread switches cannot be drawn with linear terms."""
@@ -55,10 +53,7 @@ class SwitchingNoise(Term):
         return (head, head)
 
     def _spread(self, states):
-        total = 0.0
-        for i, spread in enumerate(self.spreads):
-            total = total + spread * (states == i)
-        return total
+        return markov.added([spread * (states == i) for i, spread in enumerate(self.spreads)])
 
     def _values(self, z, states):
         spread = self._spread(states)
@@ -76,7 +71,7 @@ class SwitchingNoise(Term):
 
     def ahead(self, steps, state, *inputs):
         chances = self.chain.chances(len(steps), state)
-        variance = sum(c * (spread * spread) for c, spread in zip(chances, self.spreads, strict=True))
+        variance = markov.added([c * (spread * spread) for c, spread in zip(chances, self.spreads, strict=True)])
         return Ahead(np.zeros_like(variance), variance)
 
     def moments(self, axis, *inputs):
