@@ -179,19 +179,23 @@ class States:
         self.shares = occupancy(self.p)
         self.start = None if values["start"] == STATIONARY else names.index(values["start"])
 
+    def _rest(self) -> Array:
+        assert self.shares is not None  # `check` refuses a stationary start without them
+        return self.shares
+
     def first(self, z: Array) -> Array:
         """The states at step 0, (paths,), from the standardised uniforms of that step."""
         if self.start is not None:
             return np.full(z.shape, float(self.start))
         out = np.empty((1, len(z)))
-        row = np.tile(thresholds(self.shares[None, :]), len(self.p))
+        row = np.tile(thresholds(self._rest()[None, :]), len(self.p))
         return move(z[None, :], row, len(self.p) - 1, np.zeros(len(z)), out)
 
     def before(self, z: Array, s: Array) -> Array:
         """The states at steps −n .. −1, from the uniforms at these steps and the states at step 0."""
         out = np.empty_like(z)
         if len(z):
-            move(z[::-1].copy(), thresholds(backwards(self.p, self.shares)), len(self.p) - 1, s, out)
+            move(z[::-1].copy(), thresholds(backwards(self.p, self._rest())), len(self.p) - 1, s, out)
         return out[::-1].copy()
 
     def go(self, z: Array, state: State) -> tuple[Array, State]:
@@ -210,7 +214,7 @@ class States:
         if "s" in state:
             now = np.stack([np.where(state["s"][0] == i, 1.0, 0.0) for i in range(len(self.p))])
         else:
-            now = self.shares[:, None] if self.start is None else np.eye(len(self.p))[:, self.start, None]
+            now = self._rest()[:, None] if self.start is None else np.eye(len(self.p))[:, self.start, None]
         rows = []
         for h in range(steps):
             if h or "s" in state:

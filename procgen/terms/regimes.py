@@ -92,7 +92,7 @@ class Regimes(Term):
         return self._shown(branches, last), state
 
     def _shown(self, branches, states):
-        shown = branches[0] + np.zeros_like(states)
+        shown = branches[0]
         for number, rows in enumerate(branches[1:], start=1):
             shown = np.where(states == number, rows, shown)
         return {"": shown, "regime": states}

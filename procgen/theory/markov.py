@@ -11,7 +11,7 @@ import numpy as np
 from procgen.theory import known
 from procgen.theory.chains import States, Switching
 from procgen.theory.expression import Expression
-from procgen.theory.linear import At, Linear
+from procgen.theory.linear import At, Linear, base_of
 from procgen.theory.processes import Process, Steps
 from procgen.theory.sources import GARCH
 from procgen.theory.unknown import Unknown
@@ -62,7 +62,7 @@ class Indicator(Process):
         centred = np.eye(len(self.chain.p)) - self.chain.chances(steps - by)[..., None, :]
         value = np.ones((*steps.shape, len(self.chain.p)))
         for form in forms:
-            value = value * sum(c * centred[..., key.base.source.detail.state] for key, c in form.items())
+            value = value * sum(c * centred[..., base_of(key).source.detail.state] for key, c in form.items())
         return value, by
 
 
