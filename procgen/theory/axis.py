@@ -15,10 +15,12 @@ from procgen.theory.garch import Garch
 from procgen.theory.known import Known
 from procgen.theory.laws import is_gaussian
 from procgen.theory.linear import At, Base, Linear
+from procgen.theory.logvariance import Egarch, Stochastic
 from procgen.theory.processes import Chain, Curved, Held, Hinged, Process, mean_at
 from procgen.theory.sources import GARCH, IID, PROCESS, SQUARES, Source, Space, roots
 from procgen.theory.unknown import Unknown
 from procgen.theory.verdict import CYCLES, judge
+from procgen.theory.volatility import ConditionalVariance, Gjr, Volatility
 
 
 @dataclass
@@ -90,6 +92,41 @@ class Axis:
         return Expression(
             self.space, self._past(before_shocks), noise.linear, outputs={"variance": lambda: self._variance(source)}
         )
+
+    def gjr_garch(
+        self,
+        key: str,
+        law: Any,
+        omega: float,
+        alpha: float,
+        gamma: float,
+        beta: float,
+        first_variance: float | None = None,
+        before: Sequence[float] | None = None,
+    ) -> Expression:
+        """White shocks, h(t) = omega + (alpha + gamma I(e(t-1) < 0)) e(t-1)^2 + beta h(t-1); perhaps from a given h(0)."""
+        return self._volatile(key, Gjr(law, omega, alpha, gamma, beta, first_variance), before)
+
+    def egarch(
+        self,
+        key: str,
+        law: Any,
+        mean_log: float,
+        beta: float,
+        alpha: float,
+        gamma: float,
+        centre: float,
+        first_log: float | None = None,
+        before: Sequence[float] | None = None,
+    ) -> Expression:
+        """White shocks whose log variance has the shocks alpha (abs(z) - centre) + gamma z; from a given one or not."""
+        return self._volatile(key, Egarch(law, mean_log, beta, alpha, gamma, centre, first_log), before)
+
+    def stochastic_volatility(
+        self, key: str, law: Any, mean_log: float, phi: float, eta: float, rho: float = 0.0
+    ) -> Expression:
+        """White shocks whose log variance is a Gaussian autoregression, its shocks correlated by rho with z."""
+        return self._volatile(key, Stochastic(law, mean_log, phi, eta, rho), None)
 
     def filtered(
         self,
@@ -243,6 +280,22 @@ class Axis:
             lambda steps: past[np.clip(np.asarray(steps) + len(past) - 1, 0, len(past) - 1)],
             note=f"the given past of {self.name}",
         )
+
+    def _volatile(self, key: str, process: Volatility, before: Sequence[float] | None) -> Expression:
+        path, settles = (process.variance_path, process.settles) if process.started else (None, 0.0)
+        source = self.space.add(Source(key, GARCH, process.variance, process.law, path, settles, detail=process))
+        noise = self._noise(source, started=process.started)
+        outputs = {"variance": lambda: self._conditional(source, noise)}
+        return Expression(self.space, self._past(before), noise.linear, outputs=outputs)
+
+    def _conditional(self, source: Source, noise: Expression) -> Expression:
+        process = source.detail
+        if process.started:
+            path = known.whole(("variance", source.key), process.variance_path, note=f"variance of {source.key}")
+            return opaque(self.space, (noise,), f"the variance of {source.key}, which leaves from a given one", path)
+        if not np.isfinite(process.variance):
+            return opaque(self.space, (noise,), f"infinite mean of the variance of {source.key}")
+        return self._process(ConditionalVariance(source, noise), known.constant(process.variance))
 
     def _variance(self, source: Source) -> Expression:
         process: Garch = source.detail

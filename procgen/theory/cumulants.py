@@ -1,7 +1,7 @@
 """Moments of order 3 and 4 of linear forms of one source that is not Gaussian.
 
 For independent shocks with cumulant k_n, the joint cumulant of forms with weights w_i(u) on the shock of step u is k_n
-times the sum over u of the product of the weights (Brillinger 1975, ch. 2). For a garch with a symmetric law, the
+times the sum over u of the product of the weights (Brillinger 1975, ch. 2). For a garch whose signs are free, the
 mean of a product of shocks is 0 unless each step occurs an even number of times.
 """
 
@@ -9,8 +9,8 @@ from __future__ import annotations
 
 import numpy as np
 
-from procgen.theory.chains import Switching
 from procgen.theory.covariance import covariance
+from procgen.theory.garch import Garch
 from procgen.theory.linear import At, Base, Linear
 from procgen.theory.sources import Source, Space
 from procgen.theory.unknown import Unknown
@@ -30,10 +30,11 @@ def joint_cumulant(source: Source, forms: Sided, t: np.ndarray, s: np.ndarray) -
 
 
 def garch_product(space: Space, source: Source, forms: Sided, t: np.ndarray, s: np.ndarray) -> np.ndarray:
-    """What E of a product of 4 forms of a garch with a symmetric law exceeds the Gaussian pairings by.
+    """What E of a product of 4 forms of a garch exceeds the Gaussian pairings by.
 
     With S(u - v) = E e(u)^2 e(v)^2 the whole is the sum over u, v of S(u - v) times the three ways to put two of the
-    weights at u and two at v; that counts u = v three times instead of once.
+    weights at u and two at v; that counts u = v three times instead of once. Where signs matter this holds for forms of
+    one shock each, at two steps.
     """
     if source.path is not None:
         raise Unknown(f"fourth moments of {source.key}, which leaves from a given past")
@@ -41,13 +42,23 @@ def garch_product(space: Space, source: Source, forms: Sided, t: np.ndarray, s: 
 
     def excess(steps: list[int]) -> float:
         nonlocal covariances
-        a, b, c, d = weights_at(forms, steps)
+        weights = a, b, c, d = weights_at(forms, steps)
+        if not source.symmetric and not _in_pairs(weights):
+            raise Unknown(f"signs of {source.key} move its variance: an odd product of its shocks has a mean")
         if len(covariances) < len(a):
             covariances = square_covariance(space, source, np.arange(len(a)))
         paired = sum(_quadratic(p, q, covariances) for p, q in ((a * b, c * d), (a * c, b * d), (a * d, b * c)))
         return paired - 2.0 * float((a * b * c * d).sum()) * (float(covariances[0]) + source.variance**2)
 
     return over_distinct(forms, t, s, excess)
+
+
+def _in_pairs(weights: np.ndarray) -> bool:
+    """Whether each of the four forms is of one shock, and these are two and two the same."""
+    if (np.count_nonzero(weights, axis=1) > 1).any():
+        return False
+    at = np.sort(np.argmax(weights != 0.0, axis=1))
+    return bool(at[0] == at[1] and at[2] == at[3])
 
 
 def _quadratic(p: np.ndarray, q: np.ndarray, covariances: np.ndarray) -> float:
@@ -60,9 +71,9 @@ def _quadratic(p: np.ndarray, q: np.ndarray, covariances: np.ndarray) -> float:
 
 
 def square_covariance(space: Space, source: Source, lags: np.ndarray) -> np.ndarray:
-    """Cov(e(t + lag)^2, e(t)^2) of a garch in its stationary law, or of a switching noise."""
+    """Cov(e(t + lag)^2, e(t)^2) of a source with a moving variance in its stationary law."""
     process = source.detail
-    if isinstance(process, Switching):
+    if not isinstance(process, Garch):
         return process.square_covariance(lags)
     if not np.isfinite(process.shock_variance):
         raise Unknown(f"infinite fourth moment of {source.key}")

@@ -124,7 +124,10 @@ class Garch:
         At order (1,1) it is twice the s with E (beta + alpha z^2)^s = 1 (Kesten 1973; Mikosch & Starica 2000).
         """
         if len(self.alpha) == 1 and len(self.beta) <= 1:
-            return min(self._tail_index(), float(self.law.highest_moment))
+            a, b = self.alpha[0], self.beta[0] if self.beta else 0.0
+            if a == 0.0:
+                return float(self.law.highest_moment)
+            return min(tail_index(self.law, lambda z: b + a * z * z), float(self.law.highest_moment))
         if np.isfinite(self.shock_variance):
             return float(np.nextafter(4.0, 5.0))
         return float(np.nextafter(2.0, 3.0)) if np.isfinite(self.variance) else 0.0
@@ -135,27 +138,6 @@ class Garch:
         if np.isfinite(float(self.law.highest_moment)):
             return True
         return len(self.alpha) == 1 and len(self.beta) <= 1 and self.highest_moment < 2.0 * HIGHEST
-
-    def _tail_index(self) -> float:
-        from scipy.optimize import brentq
-
-        a, b = self.alpha[0], self.beta[0] if self.beta else 0.0
-        if a == 0.0:
-            return np.inf
-        highest = min(float(self.law.highest_moment) / 2.0, HIGHEST)
-
-        def excess(s: float) -> float:
-            return expect(self.law, lambda z: np.exp(np.minimum(s * np.log(b + a * z * z), 700.0))) - 1.0
-
-        low, high = 1e-3, 1.0
-        while high < highest and excess(min(high, 0.999 * highest)) < 0.0:
-            low, high = high, 2.0 * high
-        high = min(high, 0.999 * highest)
-        if excess(high) < 0.0:
-            return 2.0 * highest  # every moment that is looked at
-        if excess(low) >= 0.0:
-            return 0.0
-        return 2.0 * brentq(excess, low, high, xtol=ROOT_TOLERANCE)
 
     @property
     def settles(self) -> float:
@@ -197,3 +179,23 @@ def expect(law: Any, f: Any) -> float:
     with warnings.catch_warnings(), np.errstate(over="ignore", invalid="ignore"):
         warnings.simplefilter("ignore")
         return float(law.expect(f))
+
+
+def tail_index(law: Any, factor: Any) -> float:
+    """Twice the s with E factor(z)^s = 1: the order below which e has moments when h(t+1) = omega + factor(z) h(t)."""
+    from scipy.optimize import brentq
+
+    highest = min(float(law.highest_moment) / 2.0, HIGHEST)
+
+    def excess(s: float) -> float:
+        return expect(law, lambda z: np.exp(np.minimum(s * np.log(factor(z)), 700.0))) - 1.0
+
+    low, high = 1e-3, 1.0
+    while high < highest and excess(min(high, 0.999 * highest)) < 0.0:
+        low, high = high, 2.0 * high
+    high = min(high, 0.999 * highest)
+    if excess(high) < 0.0:
+        return 2.0 * highest  # every moment that is looked at
+    if excess(low) >= 0.0:
+        return 0.0
+    return 2.0 * brentq(excess, low, high, xtol=ROOT_TOLERANCE)

@@ -53,7 +53,8 @@ class Source:
     @property
     def symmetric(self) -> bool:
         """Whether flipping all signs leaves its law as it is."""
-        return self.kind in (IID, GARCH) and is_symmetric(self.law)
+        signed = getattr(self.detail, "leverage", False)  # the variance of a garch-like source follows signs
+        return self.kind in (IID, GARCH) and not signed and is_symmetric(self.law)
 
 
 @dataclass

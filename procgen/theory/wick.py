@@ -151,7 +151,7 @@ def _few_moments(space, group, factors, tilts, t, s) -> Pair:
     if order == 1 or (order % 2 and all(source.symmetric for source in group)):
         return zero, zero  # flipping all signs turns an odd product round
     one = group[0] if len(group) == 1 else None
-    if order == 4 and one is not None and one.kind == GARCH and one.symmetric:
+    if order == 4 and one is not None and one.kind == GARCH:
         apart, cross = _gaussian(space, factors, tilts, t, s)
         return _split(apart + cross + cumulants.garch_product(space, one, factors, t, s), apart, factors)
     if order == 2:
