@@ -65,6 +65,21 @@ class Chain(Process):
     def covariance(self, t, s):
         return self.p * (1.0 - self.p) * self.r ** np.abs(t - s).astype(float)
 
+    def product(self, factors, t, s):
+        # A product of values at one step takes two values, as the chain does: it is a line in it.
+        (m_off, m_on, m_by), (n_off, n_on, n_by) = (self._line([f for f, side in factors if side == i]) for i in (0, 1))
+        apart = (m_off + self.p * (m_on - m_off)) * (n_off + self.p * (n_on - n_off))
+        return np.full(t.shape, apart), (m_on - m_off) * (n_on - n_off) * self.covariance(t - m_by, s - n_by)
+
+    def _line(self, forms: list[Linear]) -> tuple[float, float, int]:
+        """A product of forms where the chain is 0 and where it is 1, and how many steps ago that is."""
+        keys = [(key, c) for form in forms for key, c in form.items()]
+        delays = {key.delay for key, _ in keys if isinstance(key, At) and base_of(key).source.detail is self}
+        if len(keys) > len(forms) or len(delays) > 1 or any(base_of(key).source.detail is not self for key, _ in keys):
+            raise Unknown(f"moments of {self.name} at three steps or more are not known in closed form")
+        scale = float(np.prod([c for _, c in keys]))
+        return scale * (-self.p) ** len(keys), scale * (1.0 - self.p) ** len(keys), min(delays, default=0)
+
 
 class Held(Process):
     """An expression read at other steps: x(t) = y(step_of(t)), less its mean."""

@@ -181,6 +181,23 @@ def test_chain_is_the_powers_of_its_matrix():
     assert chain.stationarity.verdict == "strictly stationary" and not chain.gaussian
 
 
+def test_fourth_moments_of_a_chain():
+    """Excess kurtosis of scipy's Bernoulli law; squares of its deviations from the powers of the matrix."""
+    axis = Axis()
+    p, r = 0.3, 0.6
+    chain = SeriesTheory("x", axis.chain("x.flag", UNIFORM, p, r) * 2.5)
+    assert chain.excess_kurtosis == pytest.approx(float(stats.bernoulli(p).stats("k")), rel=1e-12)
+    squares = 2.5**2 * np.array([p * p, (1 - p) ** 2])  # of the deviation when off and when on
+    matrix = np.array([[1 - p * (1 - r), p * (1 - r)], [(1 - p) * (1 - r), r + p * (1 - r)]])
+    shares = np.array([1 - p, p])
+    for lag in range(5):
+        joint = shares[:, None] * np.linalg.matrix_power(matrix, lag)
+        expected_covariance = squares @ joint @ squares - (shares @ squares) ** 2
+        assert chain.autocovariance_of_squares(np.array([lag]))[0] == pytest.approx(expected_covariance, rel=1e-9)
+    two = SeriesTheory("y", axis.chain("y.flag", UNIFORM, p, r) + axis.chain("z.flag", UNIFORM, p, r).lag(3))
+    assert two.excess_kurtosis == pytest.approx(float(stats.bernoulli(p).stats("k")) / 2, rel=1e-9)
+
+
 def test_a_chain_times_noise_is_exact_and_a_sum_of_it_is_not_known():
     axis = Axis()
     chain, noise = axis.chain("x.flag", UNIFORM, 0.25, 0.5), axis.source("x.e", NORMAL, 2.0)
