@@ -40,6 +40,10 @@ def marginal(x: Expression, step: int) -> Any:
             return Affine(source.detail.marginal(step - key.delay), level, c)
         if source is not None and source.kind == IID:
             return Affine(source.law.distribution(), level, c * float(np.sqrt(source.variance)))
+    if any(source.kind == PROCESS and source.detail.discrete for source in x.sources):
+        from procgen.theory.mixtures import normals_at
+
+        return normals_at(x, step)
     raise Unknown(f"a combination of shocks that are not normal ({_names(x)}) has no closed law")
 
 

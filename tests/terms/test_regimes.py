@@ -6,6 +6,7 @@ from itertools import product
 
 import numpy as np
 import pytest
+from scipy.stats import norm
 from statsmodels.tsa.regime_switching.markov_regression import MarkovRegression
 
 from procgen.spec.model import SpecError
@@ -248,6 +249,29 @@ def test_the_forecast_is_the_mean_over_the_chain():
     mean = 1 - p + p * m
     assert ahead.mean[2] == pytest.approx(mean, rel=1e-12)
     assert ahead.variance[2] == pytest.approx((1 - p) + p * (v + m**2) - mean**2, rel=1e-11)
+
+
+@pytest.mark.parametrize("start", ["stationary", "wet"])
+def test_the_law_at_a_step_is_a_mixture_of_normals(start):
+    """Weights from powers of P, normals from the branches' definitions, added up with SciPy's normal."""
+    graph = graph_of(f"  x:\n    - regimes:\n        {ROWS}\n        start: {start}\n        {BRANCHES}", rest=COMMON)
+    law = theory_of(graph).marginal(3)
+    first = occupancy(THREE) if start == "stationary" else np.array([0.0, 1.0, 0.0])
+    weights, at = first @ np.linalg.matrix_power(THREE, 3), np.linspace(-8, 12, 41)
+    means, sds = (0, 1.6, 6), np.sqrt([1 / (1 - 0.36) + 2.25, 4 * 2.25, 3 * 0.25])
+    expected = sum(w * norm.cdf(at, m, s) for w, m, s in zip(weights, means, sds, strict=True))
+    assert law.cdf(at) == pytest.approx(expected, rel=1e-10)
+    assert law.mean() == pytest.approx(theory_of(graph).mean([3])[0], rel=1e-12)
+    assert law.var() == pytest.approx(theory_of(graph).variance([3])[0], rel=1e-9)
+
+
+def test_laws_that_are_no_mixture_of_normals_are_refused_with_a_reason():
+    known = theory_of(
+        graph_of(
+            "  x: {regimes: {durations: {a: 5, b: 2}, branches: {a: [{constant: 2}], b: [{ar: {phi: 0, sd: 1}}]}}}"
+        )
+    )
+    assert known.marginal(3) is None and "one number" in known.reason("marginal")
 
 
 SWITCHING = "switching_noise: {sd: {dry: 0.5, wet: 1, storm: 3}, " + ROWS + "}"

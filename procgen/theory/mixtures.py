@@ -1,0 +1,81 @@
+"""The law at one step of a series that is Gaussian in each state of a chain: a mixture of normals (Hamilton 1989)."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+
+from procgen.chance.laws.mixture import Normals
+from procgen.theory import known
+from procgen.theory.expression import Expression
+from procgen.theory.laws import is_gaussian
+from procgen.theory.linear import At, Linear, base_of
+from procgen.theory.markov import Indicator
+from procgen.theory.monomials import Term
+from procgen.theory.sources import Source
+from procgen.theory.unknown import Unknown
+
+
+def normals_at(x: Expression, step: int) -> Any:
+    """The law of x at a step as a frozen SciPy distribution; Unknown where it is no mixture of normals."""
+    states = [source for source in x.sources if _is_state(source)]
+    if not states:
+        raise Unknown("a sum or product of a flag and other chance has no law that is computed")
+    forms = [x.linear, *(form for term in x.terms for form in term.factors)]
+    delays = {key.delay for form in forms for key in form if _is_state(base_of(key).source) and isinstance(key, At)}
+    if len(delays) != 1 or len({source.detail.chain for source in states}) != 1:
+        raise Unknown("it depends on a chain at several steps, or on several chains: its law is not computed")
+    at = np.array([step - delays.pop()], np.int64)
+    chances = states[0].detail.chain.chances(at)[0]
+    parts = []
+    for state in np.flatnonzero(chances > 0.0):
+        inner = _given(x, int(state), chances, np.array([step], np.int64))
+        if not is_gaussian(inner):
+            raise Unknown("it is not Gaussian in each state of its chain")
+        steps = np.array([step], np.int64)
+        variance = float(inner.covariance(inner, steps, steps)[0])
+        if variance <= 0.0:
+            raise Unknown("in a state of its chain it is one number: its law has no density")
+        parts.append((float(chances[state]), float(inner.mean(steps)[0]), float(np.sqrt(variance))))
+    return Normals(tuple(parts)).distribution()
+
+
+def _given(x: Expression, state: int, chances: np.ndarray, at: np.ndarray) -> Expression:
+    """x with the indicators replaced by what they are in a state, less their means."""
+    number, linear = _split(x.linear, state, chances)
+    terms: dict[Term, float] = {}
+    for term, c in x.terms.items():
+        factors: list[Linear] = []
+        for form in term.factors:
+            value, rest = _split(form, state, chances)
+            if value and rest:
+                raise Unknown("a product of sums that hold a chain has no law that is computed")
+            if rest or not form:
+                factors.append(rest)
+            else:
+                c = c * value
+        if len(factors) == 1 and not term.knowns and not term.exponent and term.summed is None:
+            linear = linear + factors[0].scaled(c)
+        elif factors or term.exponent or term.summed is not None:
+            inner = Term(term.knowns, tuple(factors), term.exponent, term.summed)
+            terms[inner] = terms.get(inner, 0.0) + c
+        else:
+            number = number + c * float(term.coefficient(at)[0])
+    return Expression(x.space, x.mean_path + known.constant(number), linear, {t: c for t, c in terms.items() if c})
+
+
+def _split(form: Linear, state: int, chances: np.ndarray) -> tuple[float, Linear]:
+    """The part of a form that a state makes known, and the rest."""
+    value, rest = 0.0, {}
+    for key, c in form.items():
+        source = base_of(key).source
+        if _is_state(source):
+            value += c * (float(source.detail.state == state) - float(chances[source.detail.state]))
+        else:
+            rest[key] = c
+    return value, Linear(rest)
+
+
+def _is_state(source: Source) -> bool:
+    return isinstance(source.detail, Indicator)
