@@ -61,9 +61,8 @@ class Hold(Term):
         return axis.held(body, self.read_at, int(self.every))
 
     def equation(self, body):
-        first = "" if self.first == 0 else f" − {number(self.first)}"
-        lag = f"(t{first}) mod {number(self.every)}"
-        return f"y[t] = {body}[t − {lag}]"
+        since = "t" if self.first == 0 else f"(t − {number(self.first)})"
+        return f"y[t] = {body}[t − {since} mod {number(self.every)}]"
 
 
 class RollingMean(Term):
