@@ -11,6 +11,7 @@ from procgen.spec.named import Named
 from procgen.terms import markov
 from procgen.terms.base import Ahead, Draw, Term, Unknown
 from procgen.terms.combine import Hidden
+from procgen.terms.flag import Flag
 
 
 class Regimes(Term):
@@ -33,8 +34,8 @@ class Regimes(Term):
             "follow",
             "",
             Body(),
-            "what says the number of the branch, in place of a chain of its own: a `chain`, or the regime of another "
-            "series",
+            "what says the number of the branch, in place of a chain of its own: a `chain`, a `flag`, or the "
+            "regime of another series",
             default=None,
         ),
     )
@@ -66,7 +67,9 @@ class Regimes(Term):
             return None
         found = states_of(inputs[-1])
         if found is None:
-            return "expected `follow` to be a chain, or the regime of another series, as in follow: {use: weather}"
+            return (
+                "expected `follow` to be a chain, a flag, or the regime of another series, as in follow: {use: weather}"
+            )
         if len(found) != len(self.branches):
             return f"expected a branch for each state ({', '.join(found)}), got {', '.join(self.branches)}"
         return None
@@ -113,7 +116,8 @@ class Regimes(Term):
         # The first branch, and in state k what branch k differs by: what all have in common is not multiplied.
         total = branches[0]
         for k, branch in enumerate(branches[1:], start=1):
-            total = total + axis.product([state.hidden(f"state {k}"), branch + branches[0] * -1.0])
+            in_state = state.hidden(f"state {k}") if f"state {k}" in state.outputs else state  # a flag is its own
+            total = total + axis.product([in_state, branch + branches[0] * -1.0])
         return axis.offering(total, regime=state)
 
     def equation(self, *inputs):
@@ -126,6 +130,8 @@ def states_of(node):
     """The names of the states that a node gives the number of; None when it is no chain."""
     if isinstance(node.term, markov.Chain):
         return node.term.chain.names
+    if isinstance(node.term, Flag):
+        return ("off", "on")
     if isinstance(node.term, Hidden) and isinstance(node.inputs[0].term, Regimes):
         owner = node.inputs[0]
         return owner.term.chain.names if owner.term.chain is not None else states_of(owner.inputs[-1])
