@@ -68,7 +68,7 @@ class Hold(Term):
 class RollingMean(Term):
     kind = "rolling_mean"
     family = "combination"
-    purpose = "the mean of its body over the last steps, this one among them; before step 0 it reads the body's own past"
+    purpose = "the mean of its body over the last steps, this one among them; before step 0 it reads its past"
     source = "common practice, no source"
     example = "rolling_mean: {of: [{ar: {phi: 0.8, sd: 1}}], over: 7}"
     knows = "whatever is known of its body, averaged"
