@@ -289,8 +289,8 @@ class Graph:
                 faults.append(
                     Fault(
                         node.place,
-                        f"something reads {node.name} {node.head} steps before step 0, and `before` gives "
-                        f"{known}; give {node.head} values there, or lag less",
+                        f"something reads {node.name} {node.head} steps before step 0, and "
+                        + (node.term.no_past or f"`before` gives {known}; give {node.head} values there, or lag less"),
                     )
                 )
         if faults:

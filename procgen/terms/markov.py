@@ -35,6 +35,7 @@ TRANSITIONS = Parameter(
     "in place of durations: row i has the chances to go from state i to each, in order",
     default=None,
 )
+NO_PAST = "a chain has none before a given state; let it start stationary, or lag less"
 START = Parameter("start", "", Text(), "the state at step 0; stationary: drawn by the shares", default=STATIONARY)
 
 
@@ -53,10 +54,10 @@ def move(z, thresholds, m, s, out):
     return s
 
 
-def check(values: Mapping[str, Any], names: Sequence[str]) -> Iterable[Issue]:
-    """What is wrong with durations, transitions and start for states of these names."""
+def check(values: Mapping[str, Any], names: Sequence[str], where: str) -> Iterable[Issue]:
+    """What is wrong with durations, transitions and start for states of these names, which `where` declares."""
     if not 2 <= len(names) <= MOST_STATES:
-        yield "durations", f"expected 2 to {MOST_STATES} states, got {len(names)}"
+        yield where, f"expected 2 to {MOST_STATES} states, got {len(names)}"
         return
     durations, rows = values["durations"], values["transitions"]
     if (durations is None) == (rows is None):
@@ -241,6 +242,7 @@ class Chain(Term):
     source = "Feller (1968), ch. XV; Hamilton (1989)"
     example = "chain: {states: [calm, storm], durations: {calm: 40, storm: 8}}"
     knows = "mean, covariance at any lag, shares and mean stays"
+    no_past = NO_PAST
     parameters: ClassVar[tuple[Parameter, ...]] = (
         Parameter("states", "", Names(), "their names, numbered from 0"),
         DURATIONS,
@@ -250,7 +252,7 @@ class Chain(Term):
 
     @classmethod
     def check(cls, values):
-        yield from check(values, values["states"])
+        yield from check(values, values["states"], "states")
 
     def __init__(self, values):
         super().__init__(values)

@@ -25,6 +25,7 @@ class Regimes(Term):
     )
     knows = "mean and covariance at any steps from those of the branches; kurtosis where theirs is known"
     outputs = ("regime",)
+    no_past = markov.NO_PAST
     parameters: ClassVar[tuple[Parameter, ...]] = (
         Parameter("branches", "", Named(Body()), "the bodies by name; each runs all the time, whether seen or not"),
         markov.DURATIONS,
@@ -44,7 +45,7 @@ class Regimes(Term):
     def check(cls, values):
         names = tuple(values["branches"])
         if values["follow"] is None:
-            yield from markov.check(values, names)
+            yield from markov.check(values, names, "branches")
             return
         if not 2 <= len(names) <= markov.MOST_STATES:
             yield "branches", f"expected 2 to {markov.MOST_STATES} branches, got {len(names)}"

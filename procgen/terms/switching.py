@@ -30,7 +30,7 @@ class SwitchingNoise(Term):
 
     @classmethod
     def check(cls, values):
-        yield from markov.check({**values, "start": markov.STATIONARY}, tuple(values["sd"]))
+        yield from markov.check({**values, "start": markov.STATIONARY}, tuple(values["sd"]), "sd")
 
     def __init__(self, values):
         super().__init__(values)

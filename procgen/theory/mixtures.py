@@ -16,6 +16,8 @@ from procgen.theory.monomials import Term
 from procgen.theory.sources import Source
 from procgen.theory.unknown import Unknown
 
+ROUNDING = 1e-24  # of the variance: what is left of a spread that a state takes away
+
 
 def normals_at(x: Expression, step: int) -> Any:
     """The law of x at a step as a frozen SciPy distribution; Unknown where it is no mixture of normals."""
@@ -28,16 +30,16 @@ def normals_at(x: Expression, step: int) -> Any:
         raise Unknown("it depends on a chain at several steps, or on several chains: its law is not computed")
     at = np.array([step - delays.pop()], np.int64)
     chances = states[0].detail.chain.chances(at)[0]
-    parts = []
+    here, parts = np.array([step], np.int64), []
+    whole = float(x.covariance(x, here, here)[0])
     for state in np.flatnonzero(chances > 0.0):
-        inner = _given(x, int(state), chances, np.array([step], np.int64))
+        inner = _given(x, int(state), chances, here)
         if not is_gaussian(inner):
             raise Unknown("it is not Gaussian in each state of its chain")
-        steps = np.array([step], np.int64)
-        variance = float(inner.covariance(inner, steps, steps)[0])
-        if variance <= 0.0:
+        variance = float(inner.covariance(inner, here, here)[0])
+        if variance <= ROUNDING * whole:
             raise Unknown("in a state of its chain it is one number: its law has no density")
-        parts.append((float(chances[state]), float(inner.mean(steps)[0]), float(np.sqrt(variance))))
+        parts.append((float(chances[state]), float(inner.mean(here)[0]), float(np.sqrt(variance))))
     return Normals(tuple(parts)).distribution()
 
 

@@ -300,12 +300,10 @@ def test_the_law_at_a_step_is_a_mixture_of_normals(start):
     assert law.var() == pytest.approx(theory_of(graph).variance([3])[0], rel=1e-9)
 
 
-def test_laws_that_are_no_mixture_of_normals_are_refused_with_a_reason():
-    known = theory_of(
-        graph_of(
-            "  x: {regimes: {durations: {a: 5, b: 2}, branches: {a: [{constant: 2}], b: [{ar: {phi: 0, sd: 1}}]}}}"
-        )
-    )
+@pytest.mark.parametrize("start", ["stationary", "b"])
+def test_laws_that_are_no_mixture_of_normals_are_refused_with_a_reason(start):
+    branches = "branches: {a: [{constant: 2}], b: [{constant: 400, as: up}, {white_noise: {sd: 2}}]}"
+    known = theory_of(graph_of(f"  x: {{regimes: {{durations: {{a: 9, b: 240}}, start: {start}, {branches}}}}}"))
     assert known.marginal(3) is None and "one number" in known.reason("marginal")
 
 
@@ -349,5 +347,7 @@ def test_refusals(text, message):
 
 
 def test_a_chain_from_a_given_state_has_no_past():
-    with pytest.raises(SpecError, match=r"something reads x\.chain 2 steps before step 0"):
+    with pytest.raises(
+        SpecError, match=r"reads x\.chain 2 steps before step 0, and a chain has none before a given state; let"
+    ):
         graph_of("  x: {lag: {of: [{chain: {states: [i, j], durations: {i: 2, j: 2}, start: i}}], by: 2}}")
