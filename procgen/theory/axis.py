@@ -104,7 +104,7 @@ class Axis:
         first_variance: float | None = None,
         before: Sequence[float] | None = None,
     ) -> Expression:
-        """White shocks, h(t) = omega + (alpha + gamma I(e(t-1) < 0)) e(t-1)^2 + beta h(t-1); perhaps from a given h(0)."""
+        """White shocks, h(t) = omega + (alpha + gamma I(e(t-1) < 0)) e(t-1)^2 + beta h(t-1), or from a given h(0)."""
         return self._volatile(key, Gjr(law, omega, alpha, gamma, beta, first_variance), before)
 
     def egarch(

@@ -40,6 +40,8 @@ EXEMPT_PLACES = {
     ("terms/arma.py", "_root"),
     ("terms/garch.py", "burn"),
     ("terms/garch.py", "_without_variance"),
+    ("terms/gjr.py", "burn"),
+    ("terms/gjr.py", "_without_variance"),
 }
 
 ELEMENTARY = set(

@@ -2,20 +2,22 @@
 
 import math
 import pickle
+from itertools import pairwise
 
 import mpmath
 import numpy as np
 import pytest
 from arch.univariate import SkewStudent
-from scipy import special, stats
+from scipy import integrate, special, stats
 
 from procgen.chance.gamma import half_step, log_gamma
-from procgen.chance.laws import GED, Gamma, Lognormal, NormalMixture, SkewedT, SkewNormal
+from procgen.chance.laws import GED, Gamma, Laplace, Lognormal, Normal, NormalMixture, SkewedT, SkewNormal, StudentT
 from procgen.chance.portable import normal_quantile
 from procgen.spec.reader import SpecError
 from tests.terms.helpers import graph_of
 
 from .test_laws import P
+from .test_laws import scipys as others
 
 SEVERAL = NormalMixture(components=((0.5, -1, 0.5), (0.3, 0, 1), (0.2, 2, 3)))
 EXAMPLES = [
@@ -45,6 +47,7 @@ EXAMPLES = [
     NormalMixture(components=((1, 0, 0.01), (1, 5, 100))),
     NormalMixture(components=((3, 0, 1),)),
 ]
+OTHERS = [Normal(), Laplace(), StudentT(df=2.05), StudentT(df=7)]
 
 
 def scipys(law):
@@ -335,3 +338,19 @@ def test_a_wrong_law_is_noticed():
     """The comparison can fail: a shape off by 1e-7 is seen."""
     lower, _ = areas(GED(shape=1.5))
     assert np.abs(lower(GED(shape=1.5 + 1e-7).shocks(P)) / P - 1).max() > 1e-9
+
+
+@pytest.mark.parametrize("law", [*EXAMPLES, *OTHERS], ids=str)
+def test_mean_size_by_quadrature(law):
+    """E abs(z) as twice the mean of the upper side, by SciPy's quadrature of SciPy's own areas: the integral of sf."""
+    _, upper = others(law) if law in OTHERS else areas(law)
+    edges = [0.0, *np.geomspace(1e-3, 1e3, 25), np.inf]
+    wanted = 2 * sum(integrate.quad(upper, a, b, epsabs=1e-13, limit=200)[0] for a, b in pairwise(edges))
+    assert law.mean_size == pytest.approx(wanted, rel=2e-9)
+
+
+def test_balanced_laws():
+    assert all(
+        law.balanced for law in (Normal(), Laplace(), GED(shape=0.4), SkewedT(df=3, skew=0), SkewNormal(alpha=0))
+    )
+    assert not any(law.balanced for law in (SkewedT(df=3, skew=0.01), Gamma(shape=10_000), Lognormal(sigma=0.001)))

@@ -132,6 +132,28 @@ def clustering(values: dict, x: float) -> dict:
     return {name: value for name, value in values.items() if name != "omega"} | kept | {"sd": x}
 
 
+def threshold(values: dict, x: float) -> dict:
+    """A persistence below 1 under any law, and omega, which a skewed law needs."""
+    values = {name: value for name, value in values.items() if name != "sd"} | past_variances(values)
+    return values | {"omega": x, "alpha": 0.3 * x, "gamma": 0.3 * x, "beta": 0.3}
+
+
+def exponential(values: dict, x: float) -> dict:
+    """One level, coefficients of moderate size, and any law."""
+    values = {name: value for name, value in values.items() if name != "omega"} | past_variances(values)
+    return values | {"scale": x, "alpha": 0.3 * x, "gamma": -0.1, "beta": x, "allow_infinite_variance": True}
+
+
+def stochastic(values: dict, x: float) -> dict:
+    """One level, and leverage under a normal law alone."""
+    values = {name: value for name, value in values.items() if name != "sd"} | {"scale": x, "phi": x, "eta": 0.3}
+    return values if "law" not in values else {name: value for name, value in values.items() if name != "rho"}
+
+
+def past_variances(values: dict) -> dict:
+    return {"before": {"variance": [0.5] * 4, "shocks": [0.1] * 4}} if "before" in values else {}
+
+
 def repeating(values: dict, x: float) -> dict:
     """Harmonics or a profile, not both."""
     if values.get("harmonics"):
@@ -239,6 +261,9 @@ MEND = {
     **dict.fromkeys(("arima", "seasonal_random_walk", "ornstein_uhlenbeck"), integrated),
     "stochastic_cycle": turning,
     **dict.fromkeys(("garch", "arch"), clustering),
+    "gjr_garch": threshold,
+    "egarch": exponential,
+    "stochastic_volatility": stochastic,
     "seasonal": repeating,
     "trend": bending,
 }
