@@ -12,9 +12,9 @@ import time
 from pathlib import Path
 
 import numpy as np
+import pandas as pd
 import pyarrow as pa
 import pyarrow.parquet as pq
-import pandas as pd
 import pytest
 from typer.testing import CliRunner
 
