@@ -196,7 +196,10 @@ class Axis:
             squares = squares + in_state * (spread**2 - spreads[0] ** 2)
         behind = frozenset(root for x in (z, state) for source in x.sources for root in roots(source))
         process = Switching(law, np.array(spreads), States(*chain[:3]))
-        white = self.space.add(Source(f"{key} switching", GARCH, process.variance, law, detail=process, depends=behind))
+        (shocks,) = z.sources
+        white = self.space.add(
+            Source(f"{key} switching", GARCH, process.variance, law, owner=shocks, detail=process, depends=behind)
+        )
         return self.offering(total, regime=state, variance=squares, white=self._noise(white))
 
     def offering(self, x: Expression, **outputs: Expression) -> Expression:

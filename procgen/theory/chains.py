@@ -77,6 +77,7 @@ class Switching:
     def __init__(self, law: Any, spreads: np.ndarray, chain: States):
         self.law, self.chain, self.squares = law, chain, np.asarray(spreads, float) ** 2
         self.variance = float(chain.shares @ self.squares)
+        self.mean_spread = float(chain.shares @ np.asarray(spreads, float))
         self.highest_moment = float(law.highest_moment)
         self.power_tailed = bool(np.isfinite(self.highest_moment))
         self.strictly_stationary = (True, "its chain is stationary")

@@ -44,7 +44,7 @@ def normals_at(x: Expression, step: int) -> Any:
 
 
 def _given(x: Expression, state: int, chances: np.ndarray, at: np.ndarray) -> Expression:
-    """x with the indicators replaced by what they are in a state, less their means."""
+    """x at a step with the indicators replaced by what they are in a state, less their means."""
     number, linear = _split(x.linear, state, chances)
     terms: dict[Term, float] = {}
     for term, c in x.terms.items():
@@ -57,8 +57,8 @@ def _given(x: Expression, state: int, chances: np.ndarray, at: np.ndarray) -> Ex
                 factors.append(rest)
             else:
                 c = c * value
-        if len(factors) == 1 and not term.knowns and not term.exponent and term.summed is None:
-            linear = linear + factors[0].scaled(c)
+        if len(factors) == 1 and not term.exponent and term.summed is None:
+            linear = linear + factors[0].scaled(c * float(term.coefficient(at)[0]))
         elif factors or term.exponent or term.summed is not None:
             inner = Term(term.knowns, tuple(factors), term.exponent, term.summed)
             terms[inner] = terms.get(inner, 0.0) + c

@@ -12,6 +12,7 @@ from typing import Any
 
 import numpy as np
 
+from procgen.theory.chains import Switching
 from procgen.theory.copula import is_symmetric, law_correlation
 from procgen.theory.unknown import Unknown
 
@@ -33,7 +34,7 @@ class Source:
     law: Any = None
     path: Callable[[np.ndarray], np.ndarray] | None = None
     settles: float = 0.0
-    owner: Source | None = None  # the garch whose squares a SQUARES source drives
+    owner: Source | None = None  # the garch whose squares a SQUARES source drives; the shocks of a switching noise
     detail: Any = None  # the Garch behind a garch or squares source; the ingredients of an opaque one; the Process
     depends: frozenset[Source] = frozenset()
     reason: str = ""
@@ -112,12 +113,12 @@ class Space:
                 raise Unknown(f"the covariance of {a.key} and {b.key} is not known in closed form")
         if SQUARES in (a.kind, b.kind):
             return self._with_squares(a, b)
-        if GARCH in (a.kind, b.kind):
+        if GARCH in (a.kind, b.kind) and not (_mean_spread(a) and _mean_spread(b)):
             raise Unknown(
                 f"{a.key} and {b.key} are correlated and conditionally heteroskedastic: their covariance is "
                 "the correlation times the mean product of their conditional standard deviations, which is not known"
             )
-        return float(np.sqrt(a.variance * b.variance)) * self.law_correlation(a, b)[0]
+        return _mean_spread(a) * _mean_spread(b) * self.law_correlation(a, b)[0]
 
     def law_correlation(self, a: Source, b: Source) -> tuple[float, float]:
         """Correlation of the values of two independent-in-time sources, and a bound on its numerical error."""
@@ -136,6 +137,13 @@ class Space:
 def roots(source: Source) -> Iterable[Source]:
     """The primary sources behind a source."""
     return source.depends or (source.owner or source,)
+
+
+def _mean_spread(source: Source) -> float:
+    """Mean of the conditional standard deviation where it moves by itself; 0 where it is not known."""
+    if isinstance(source.detail, Switching):
+        return source.detail.mean_spread
+    return float(np.sqrt(source.variance)) if source.kind == IID else 0.0
 
 
 def _named(source: Source) -> str:

@@ -55,18 +55,21 @@ class Theory(Mapping[str, SeriesTheory]):
     @cached_property
     def correlated(self) -> tuple[Correlated, ...]:
         """Every correlated pair of terms, the one that leads (first in `correlation`) first."""
-        sources = [self.axis.space.sources[name] for name in self.names if name in self.axis.space.sources]
+        known = self.axis.space.sources
+        sources = [known.get(f"{name} switching", known[name]) for name in self.names if name in known]
         return tuple(self._correlated(a, b) for a, b in combinations(sources, 2) if self.axis.space.dependent(a, b))
 
     def _correlated(self, a: Source, b: Source) -> Correlated:
+        names = ((a.owner or a).key, (b.owner or b).key)
         normals = self.axis.space.normal_correlation(a, b)
-        if GARCH in (a.kind, b.kind):
-            try:
-                self.axis.space.covariance(a, b)
-            except Unknown as unknown:
-                return Correlated(a.key, b.key, normals, None, reason=unknown.reason)
+        try:
+            covariance = self.axis.space.covariance(a, b) if GARCH in (a.kind, b.kind) else None
+        except Unknown as unknown:
+            return Correlated(*names, normals, None, reason=unknown.reason)
         value, tolerance = self.axis.space.law_correlation(a, b)
-        return Correlated(a.key, b.key, normals, value, tolerance)
+        if covariance is not None:
+            value = covariance / float(np.sqrt(a.variance * b.variance))
+        return Correlated(*names, normals, value, tolerance)
 
     def as_dict(self, at: Sequence[int], lags: int | Sequence[int] = 40) -> dict[str, Any]:
         """What `procgen theory --json` prints."""

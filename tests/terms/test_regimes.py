@@ -6,6 +6,7 @@ from itertools import product
 
 import numpy as np
 import pytest
+from mpmath import mp
 from scipy.stats import norm
 from statsmodels.tsa.regime_switching.markov_regression import MarkovRegression
 
@@ -302,9 +303,10 @@ def test_the_law_at_a_step_is_a_mixture_of_normals(start):
 
 @pytest.mark.parametrize("start", ["stationary", "b"])
 def test_laws_that_are_no_mixture_of_normals_are_refused_with_a_reason(start):
-    branches = "branches: {a: [{constant: 2}], b: [{constant: 400, as: up}, {white_noise: {sd: 2}}]}"
+    branches = "branches: {b: [{constant: 400, as: up}, {white_noise: {sd: 2}}], a: [{constant: 2}]}"
     known = theory_of(graph_of(f"  x: {{regimes: {{durations: {{a: 9, b: 240}}, start: {start}, {branches}}}}}"))
-    assert known.marginal(3) is None and "one number" in known.reason("marginal")
+    for step in (3, 84):
+        assert known.marginal(step) is None and "one number" in known.reason("marginal")
 
 
 @pytest.mark.parametrize(
@@ -351,3 +353,13 @@ def test_a_chain_from_a_given_state_has_no_past():
         SpecError, match=r"reads x\.chain 2 steps before step 0, and a chain has none before a given state; let"
     ):
         graph_of("  x: {lag: {of: [{chain: {states: [i, j], durations: {i: 2, j: 2}, start: i}}], by: 2}}")
+
+
+def test_covariances_far_apart_keep_their_digits():
+    """Two states: p₀p₁(1 − a − b)^lag with a, b the chances to leave (Feller 1968, XV.1), in 50 digits by mpmath."""
+    known = theory_of(graph_of("  x: {chain: {states: [i, j], durations: {i: 1000000, j: 100000}}}", steps=20_000_000))
+    lags = [1, 1000, 1_000_000, 15_000_000]
+    with mp.workdps(50):
+        a, b = mp.mpf(1) / 10**6, mp.mpf(1) / 10**5
+        expected = [float(a * b / (a + b) ** 2 * (1 - a - b) ** lag) for lag in lags]
+    assert known.autocovariance(lags) == pytest.approx(expected, rel=1e-8)

@@ -54,3 +54,25 @@ def test_switching_noise_is_its_spread_times_its_shock():
     both = theory(graph.spec, graph)
     assert both.cross("x", "v").covariance([3, 7], [5, 5]) == pytest.approx([0, 0])
     assert both["v"].mean([4])[0] == pytest.approx(occupancy(THREE) @ [0.25, 1, 9], rel=1e-12)
+
+
+def test_correlated_shocks_of_switching_noises():
+    """With chains of their own, Cov = ρ E σ E τ: the spreads' means over the shares, and the filter's weights."""
+    graph = graph_of(
+        f"  x: {{{SWITCHING}}}\n  y: {{ma: {{theta: 0.5, shock: {{{SWITCHING}}}}}}}\n  z: {{white_noise: {{sd: 2}}}}",
+        rest="correlation:\n  - {between: [x.switching_noise, z.white_noise], value: 0.6}\n"
+        "  - {between: [y.ma, z.white_noise], value: 0.3}\n  - {between: [x.switching_noise, y.ma], value: 0.2}",
+    )
+    both, spread = theory(graph.spec, graph), occupancy(THREE) @ [0.5, 1, 3]
+    sd = np.sqrt(occupancy(THREE) @ [0.25, 1, 9])
+    lead = np.array([3, 4, 5])
+    assert both.cross("x", "z").covariance(lead, [3, 3, 3]) == pytest.approx([0.6 * spread * 2, 0, 0])
+    assert both.cross("y", "z").covariance(lead, [3, 3, 3]) == pytest.approx([0.3 * spread * 2, 0.15 * spread * 2, 0])
+    implied = {(c.leader, c.follower): c.values for c in both.correlated}
+    assert implied["x.switching_noise", "z.white_noise"] == pytest.approx(0.6 * spread / sd)
+    assert implied["z.white_noise", "y.ma"] == pytest.approx(0.3 * spread / sd)
+    assert implied["x.switching_noise", "y.ma"] == pytest.approx(0.2 * spread**2 / sd**2)
+    found = draw(graph, 0, 4096, [4])
+    products = found["x"][3] * found["z"][3]
+    # 7 standard errors: 3e-12 under a normal error.
+    assert abs(products.mean() - 0.6 * spread * 2) < 7 * products.std() / 64
