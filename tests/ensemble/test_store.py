@@ -52,7 +52,7 @@ def test_ctrl_c_and_termination_leave_whole_parts_and_no_process(tmp_path, signu
     for _ in range(3):
         render.stdout.readline()
     os.killpg(render.pid, signum)
-    _, errors = render.communicate(timeout=10)
+    _, errors = render.communicate(timeout=60)
     assert render.returncode != 0
     assert "worker.py" not in errors
     assert "manifest.json" not in visible(tmp_path)
