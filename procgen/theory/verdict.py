@@ -22,6 +22,7 @@ from procgen.theory.known import Known
 from procgen.theory.linear import At, Frozen, Key, Linear, Season, Sum, base_of
 from procgen.theory.monomials import Term
 from procgen.theory.sources import GARCH, OPAQUE, PROCESS, SQUARES, Source, Space
+from procgen.theory.unknown import Unknown
 
 INFINITE = "infinite variance"
 GROWS = "variance grows"
@@ -83,8 +84,11 @@ def judge(x: Expression) -> Stationarity:
 
 
 def _mean(findings: _Findings, mean: Known) -> None:
-    for note in mean.movement(findings.space.horizon).notes:
-        findings.say(MEAN, note)
+    try:
+        for note in mean.movement(findings.space.horizon).notes:
+            findings.say(MEAN, note)
+    except Unknown as unknown:
+        findings.notes.append(f"mean unknown: {unknown.reason}")
 
 
 def _random_parts(findings: _Findings, x: Expression) -> None:

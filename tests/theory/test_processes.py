@@ -230,3 +230,10 @@ def test_a_bend_of_what_is_not_normal_is_unknown():
     assert bent.variance(STEPS) is None and "not Gaussian" in bent.reason("variance")
     with pytest.raises(Unknown):
         axis.hinge(axis.source("x.f", UNIFORM, 1.0)).mean(STEPS)
+
+
+def test_a_verdict_without_a_mean_is_a_verdict():
+    graph = graph_of("  x: {hold: {of: [{exp: [{garch: {sd: 1, alpha: 0.1}}]}], every: 3}}")
+    held = theory(graph.spec, graph)["x"]
+    assert held.stationarity.verdict == "infinite variance" and held.mean([0]) is None
+    assert any(reason.startswith("mean unknown: an exponential of x.garch") for reason in held.stationarity.reasons)
