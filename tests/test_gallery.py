@@ -17,7 +17,7 @@ from procgen.terms import catalogue as terms
 SPECS = Path(__file__).parent.parent / "specs"
 FILES = sorted(SPECS.glob("*.yaml"))
 NAMES = [file.stem for file in FILES]
-# Probability that a true ensemble is said to depart, over the 17 specs: 17 × 1e-8 of the suite's 1e-6.
+# Probability that a true ensemble is said to depart, over the gallery, some 30 specs: 3e-7 of the suite's 1e-6.
 FALSE_ALARM = 1e-8
 
 

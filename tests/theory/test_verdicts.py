@@ -5,7 +5,10 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from procgen.theory import SeriesTheory
+from procgen.chance.laws import LAWS
+from procgen.spec.reader import read_text
+from procgen.terms import catalogue
+from procgen.theory import SeriesTheory, theory
 from procgen.theory.verdict import CYCLES, GROWS, INFINITE, MEAN, SETTLES, STRICT, VARIES
 
 from .references import LAPLACE, NORMAL, UNIFORM, student
@@ -120,3 +123,14 @@ def test_known_paths_are_summed_exactly(axis):
         np.testing.assert_allclose(SeriesTheory("d", total.difference()).mean(np.arange(40)), values, atol=1e-12)
     far = SeriesTheory("s", seasonal(axis).integrate(1.0)).mean(10**12)
     assert abs(far - 1.0) < 12
+
+
+def test_a_variance_without_a_number_is_still_a_verdict():
+    term = (
+        "{egarch: {omega: 0.1, alpha: 0.045, gamma: -0.1, beta: 0.15, law: {skewed_t: {skew: -0.086, df: 3.782}}, "
+        "before: {variance: 1, shocks: 0.5}}}"
+    )
+    text = f"procgen: 1\nseed: 5\npaths: 50\ntime: {{steps: 60}}\nseries:\n  x: {term}\n"
+    known = theory(read_text(text, catalogue(), LAWS))["x"]
+    assert known.stationarity.verdict == SETTLES
+    assert known.variance([5]) is None and known.reason("variance") == "infinite variance of x.egarch"
