@@ -186,15 +186,15 @@ def _exponential_moments(law: Any, alpha: float, gamma: float, centre: float, to
     Unknown where the series do not settle.
     """
     z, weights = _nodes(law)
-    g = alpha * (np.abs(z) - centre) + gamma * z
-    for degree in DEGREES:
-        x = np.cos(np.pi * (np.arange(degree + 1) + 0.5) / (degree + 1))
-        grown = np.minimum(np.outer(top * (x + 1.0) / 2.0, g), LARGEST_EXPONENT)
-        with np.errstate(over="ignore", invalid="ignore"):  # what overflows does not settle either
+    with np.errstate(over="ignore", invalid="ignore"):  # what overflows in a heavy tail does not settle either
+        g = alpha * (np.abs(z) - centre) + gamma * z
+        for degree in DEGREES:
+            x = np.cos(np.pi * (np.arange(degree + 1) + 0.5) / (degree + 1))
+            grown = np.minimum(np.outer(top * (x + 1.0) / 2.0, g), LARGEST_EXPONENT)
             values = _bent(grown) @ (weights * g * g), np.exp(grown) @ (weights * z * z)
             fitted = [np.polynomial.chebyshev.chebfit(x, value, degree) for value in values]
-        if all(np.abs(c[-3:]).max() <= SETTLED * np.abs(c).max() for c in fitted):
-            return fitted[0], fitted[1], float(weights @ g), top
+            if all(np.abs(c[-3:]).max() <= SETTLED * np.abs(c).max() for c in fitted):
+                return fitted[0], fitted[1], float(weights @ g), top
     raise Unknown("its variance is too near to the edge of having this moment to be computed")
 
 
