@@ -123,12 +123,17 @@ class Arma(Term):
     def begin(self, before):
         p, q = len(self.phi), len(self.theta)
         if self.before is not None:
-            x, a = rows(self.before["x"]), rows(self.before["shocks"])
-            return x[len(x) - before.head :], {"x": x[len(x) - p :], "a": a[len(a) - q :]}
+            x = rows(self.before["x"])
+            return x[len(x) - before.head :], self._given()
         if before.joint is not None:
             x, a = (np.asarray(part)[::-1] for part in before.joint)
             return x[len(x) - before.head :], {"x": x[len(x) - p :], "a": a[len(a) - q :]}
         return self._burn_in(before)
+
+    def _given(self):
+        """The state just before step 0 that `before` states."""
+        x, a = rows(self.before["x"]), rows(self.before["shocks"])
+        return {"x": x[len(x) - len(self.phi) :], "a": a[len(a) - len(self.theta) :]}
 
     def _burn_in(self, before):
         """From the exact covariance far enough back, then through the shocks to step 0."""
@@ -154,10 +159,12 @@ class Arma(Term):
     def invert(self, values, known, state, at):
         p, q = len(self.phi), len(self.theta)
         values, gap = without_gap(values, 0.0)
-        if state is None:
+        if state is None and self.before is not None:
+            state = {**self._given(), "skip": np.array([0])}
+        elif state is None:
             state = {"x": np.zeros((p, 1)), "a": np.zeros((q, 1)), "skip": np.array([0])}
         skip = int(state["skip"][0])
-        if gap or at[0] == 0:  # the unknown past must be forgotten first
+        if gap or (at[0] == 0 and self.before is None):  # an unknown past must be forgotten first
             try:
                 skip = gap + p + (decay_length(companion([-c for c in self.theta], (), q, 0)[0], FORGOTTEN) if q else 0)
             except ValueError:

@@ -191,14 +191,19 @@ class Garch(Term):
     def begin(self, before):
         p, q = len(self.alpha), len(self.beta)
         if self.before is not None:
-            h = rows(self.before["variance"])
-            square = rows([e * e for e in self.before["shocks"]]) if self.before["shocks"] else h
-            past = rows(self.before["shocks"])
+            h, past = rows(self.before["variance"]), rows(self.before["shocks"])
             values = {"": past[len(past) - before.head :], "variance": h[len(h) - before.head :]}
-            return values, {"square": square[len(square) - p :], "h": h[len(h) - q :]}
+            return values, self._given()
         rest = self.resting()
         state = {"square": np.full((p, 1), rest), "h": np.full((q, 1), rest)}
         return burnt_in(self, before, state)
+
+    def _given(self):
+        """The state just before step 0 that `before` states."""
+        p, q = len(self.alpha), len(self.beta)
+        h = rows(self.before["variance"])
+        square = rows([e * e for e in self.before["shocks"]]) if self.before["shocks"] else h
+        return {"square": square[len(square) - p :], "h": h[len(h) - q :]}
 
     def recurse(self, inputs, state, at):
         z = inputs[0]
@@ -212,14 +217,16 @@ class Garch(Term):
         p, q = len(self.alpha), len(self.beta)
         rest = self.resting()
         values, gap = without_gap(values, self.scale())
-        if state is None:
+        if state is None and self.before is not None:
+            state = {**self._given(), "skip": np.array([0])}
+        elif state is None:
             state = {"square": np.full((p, 1), rest), "h": np.full((q, 1), rest), "skip": np.array([0])}
         square = np.concatenate([np.broadcast_to(state["square"], (p, values.shape[1])), values * values])
         h = _buffer(state["h"], values)
         variance(self.level(), np.array(self.alpha), np.array(self.beta), square, h)
         z = values / np.sqrt(h[q:])
         skip = int(state["skip"][0])
-        if gap or at[0] == 0:  # the variance behind the first known value must be forgotten first
+        if gap or (at[0] == 0 and self.before is None):  # an unknown start of the variance must be forgotten first
             skip = gap + p + (decay_length(companion(self.beta, (), q, 0)[0], FORGOTTEN) if q else 0)
         z[:skip] = np.nan
         left = np.array([max(0, skip - len(values))])

@@ -160,12 +160,13 @@ class GjrGarch(Term):
     def invert(self, values, known, state, at):
         values, gap = without_gap(values, self.scale())
         if state is None:
-            state = {"h": np.full((1, 1), self.resting()), "skip": np.array([0])}
+            first = self.resting() if self.before is None else self.first()
+            state = {"h": np.full((1, 1), first), "skip": np.array([0])}
         h = np.empty_like(values)
         following = variance(values, *self._coefficients(), h, _row(state["h"], values))
         z = values / np.sqrt(h)
         skip = int(state["skip"][0])
-        if gap or at[0] == 0:  # the variance behind the first known value must be forgotten first
+        if gap or (at[0] == 0 and self.before is None):  # an unknown start of the variance must be forgotten first
             skip = gap + 1 + (decay_length(companion((self.beta,), (), 1, 0)[0], FORGOTTEN) if self.beta else 0)
         z[:skip] = np.nan
         return z, {"h": following[None, :], "skip": np.array([max(0, skip - len(values))])}

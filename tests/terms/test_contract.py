@@ -162,3 +162,23 @@ def within(sample, expected):
     error = sample.std(axis=1) / np.sqrt(sample.shape[1])
     off = np.abs(sample.mean(axis=1) - expected)
     assert np.all(off <= 7 * error + 1e-9 * (1 + np.abs(expected)))
+
+
+@pytest.mark.parametrize(
+    "term",
+    [
+        "garch: {sd: 2, alpha: 0.15, beta: 0.8, before: {variance: 16}}",
+        "garch: {omega: 0.1, alpha: [0.1, 0.2], beta: 0.8, before: {variance: [4, 9], shocks: [1, -3]}}",
+        "arch: {omega: 0.7, alpha: 0.3, before: {variance: 4, shocks: 2}}",
+        "gjr_garch: {omega: 0.1, alpha: 0.05, gamma: 0.1, beta: 0.8, before: {variance: 4, shocks: -2}}",
+        "ar: {phi: [0.5, 0.3], sd: 1, before: {x: [3, -4]}}",
+        "arma: {phi: 0.5, theta: -0.9, sd: 1, before: {x: 3, shocks: 2}}",
+        "ar: {phi: 0.5, before: {x: 7}, shock: {garch: {sd: 1, alpha: 0.1, beta: 0.8, before: {variance: 9}}}}",
+    ],
+)
+def test_inversion_loses_no_step_behind_a_stated_past(term):
+    graph = graph_of(f"  x: {{{term}}}")
+    way = recovery(graph, "x", 20)
+    found = np.concatenate([way.tile(part) for part in np.split(draw(graph, 0, 20, [60])["x"], [1, 9])])
+    drawn = way.source.law.shocks(way.source.stream.uniforms(0, 20, 0, 60))
+    np.testing.assert_allclose(found, drawn, rtol=0, atol=1e-10)
