@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import re
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 
@@ -17,6 +17,7 @@ from procgen.ensemble.ensemble import Blocks
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.manifest import Manifest, PartRecord, node
 from procgen.ensemble.plan import Block
+from procgen.ensemble.seal import contradictions, other_than_part, refuse_version
 from procgen.ensemble.source import FACTORY, open_source, read_spec
 from procgen.ensemble.store import MANIFEST, Folder
 
@@ -79,7 +80,7 @@ class DigestResult:
         """The result in a few lines."""
         lines = [str(damage) for damage in self.damages]
         if self.damages:
-            lines.append("to mend: remove the damaged parts, then render again with --resume")
+            lines.append("to mend: render again with --resume, which draws missing and damaged parts anew")
         if self.digest is not None:
             verdict = "as recorded" if self.digest == self.recorded else f"recorded was {self.recorded}"
             lines.append(f"{self.digest}  {verdict}")
@@ -125,12 +126,18 @@ def check_digest(
     manifest = Manifest.read(data, str(folder.path / MANIFEST))
     reader = Reader(folder.path, manifest, factory)
     damages, found = reader.examine(progress)
+    false = reader.false_statements()
+    if not false and not damages:
+        refuse_version(manifest.identity, path)
     roots = None
     if found is not None:
         names = [column.name for column in manifest.columns]
         roots = {name: digest.root([(b, n[name]) for b, n in found], manifest.whole) for name in names}
         damages += _root_damages(manifest, roots, damages)
-    places = reader.places(damages) if redraw else []
+    damages = [*(Damage(MANIFEST, sentence) for sentence in false), *damages]
+    # another spec or stream version than the one that was drawn would draw other values
+    same = not false and manifest.identity.get("stream_version") == STREAM_VERSION
+    places = reader.places(damages) if redraw and same else []
     return DigestResult(
         path=str(path),
         digest=None if roots is None else digest.total({name: roots[name] for name in manifest.stored}),
@@ -157,13 +164,23 @@ class Reader:
     def __init__(self, path: Path, manifest: Manifest, factory: str):
         self.path, self.manifest, self.factory = path, manifest, factory
         self.columns = manifest.columns
-        stamped = manifest.time is not None
+        self.others: list[str] = []  # what the first part that was read says otherwise than the manifest
+        self.contradictions = contradictions(manifest, factory)
+        stamped = manifest.time is not None and not self.contradictions
         self.stamps = read_spec(manifest.raw).time.stamps if stamped else None
 
-    def examine(self, progress: Tick | None) -> tuple[list[Damage], list[tuple[Block, dict]] | None]:
+    def false_statements(self) -> list[str]:
+        """Sentences on what in the manifest is not as it was written, after `examine`."""
+        changed = self.manifest.changed
+        found = [f"it was changed after it was written: {', '.join(changed)}"] if changed else []
+        return found + self.contradictions + (self.others if changed else [])
+
+    def examine(
+        self, progress: Tick | None, parts: Sequence[PartRecord] | None = None
+    ) -> tuple[list[Damage], list[tuple[Block, dict]] | None]:
         """Damages, and the recomputed digest nodes of all parts (None when one cannot be read)."""
         damages, found, rows = [], [], 0
-        for part in self.manifest.parts:
+        for part in self.manifest.parts if parts is None else parts:
             try:
                 nodes = self._nodes(part)
                 damages += self._compare(part, nodes)
@@ -191,7 +208,7 @@ class Reader:
         """At most one damage: the first series and rectangle whose values are not those that were written."""
         mine = {name: digest.pack(each) for name, each in nodes.items()}
         if node(mine) == part.node:
-            return []
+            return self._identity(part)
         written = self._written(part)
         for name in written:
             theirs = digest.unpack(written[name], part.block, self.manifest.whole)
@@ -200,6 +217,16 @@ class Reader:
                     area = digest.area(key, part.block, self.manifest.whole)
                     return [Damage(part.file, f"series {name} has other values in {area}", name, area)]
         return [Damage(part.file, "it has other values than the manifest says; --redraw names the first")]
+
+    def _identity(self, part: PartRecord) -> list[Damage]:
+        """Whether a part says that it is of another ensemble; of a manifest that was changed, that is its fault."""
+        try:
+            said = parquet.footer(self.path / part.file)[0]
+        except EnsembleError:  # written again by another program, with the same values
+            return []
+        found = other_than_part(self.manifest.identity, said)
+        self.others = self.others or found
+        return [] if self.manifest.changed else [Damage(part.file, sentence) for sentence in found[:1]]
 
     def _written(self, part: PartRecord) -> Mapping[str, str]:
         """The nodes in the part's own footer, nothing when they are not the ones the manifest was made of."""
@@ -233,9 +260,6 @@ class Reader:
         """The first value, place by place, that is not the one its address draws."""
         if not places:
             return None
-        if self.manifest.identity.get("stream_version") != STREAM_VERSION:
-            version = self.manifest.identity.get("stream_version")
-            raise EnsembleError(f"drawn with stream version {version}; this version draws {STREAM_VERSION}")
         source = open_source(self.manifest.raw, self.manifest.identity.get("reveal", ()), self.factory)
         for place in places:
             drawer = Drawer(source)

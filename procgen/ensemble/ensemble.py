@@ -14,6 +14,7 @@ from procgen.ensemble.columns import Column, as_float
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.manifest import Manifest, bytes_text
 from procgen.ensemble.plan import Block
+from procgen.ensemble.seal import contradictions, refuse_changed, refuse_version
 from procgen.ensemble.source import read_spec
 from procgen.ensemble.store import MANIFEST, PLAN, Folder
 
@@ -181,12 +182,9 @@ class OnDisk(Ensemble):
     @property
     def spec(self) -> Any:
         if self._spec is None:
-            spec = read_spec(self.manifest.raw)
-            if spec.digest() != self.manifest.identity.get("spec"):
-                raise EnsembleError(
-                    f"the spec in {self.path / MANIFEST} is not the one that was drawn; draw the ensemble again"
-                )
-            self._spec = spec
+            for sentence in contradictions(self.manifest):
+                raise EnsembleError(f"{self.path / MANIFEST} contradicts itself: {sentence}; draw the ensemble again")
+            self._spec = read_spec(self.manifest.raw)
         return self._spec
 
     @property
@@ -207,7 +205,8 @@ class OnDisk(Ensemble):
 def open_ensemble(path: str | Path) -> OnDisk:
     """The ensemble in a folder that `render` has finished; reads only its manifest.
 
-    Raises EnsembleError when there is none, when it is unfinished, or when parts are missing.
+    Raises EnsembleError when there is none, when it was changed, when it is unfinished, when parts are missing,
+    or when it was drawn with another stream version.
     """
     folder = Folder(Path(path))
     data = folder.read_json(MANIFEST)
@@ -219,14 +218,9 @@ def open_ensemble(path: str | Path) -> OnDisk:
             else f"{path} has no {MANIFEST}; expected a folder that procgen render has made"
         )
     manifest = Manifest.read(data, str(folder.path / MANIFEST))
-    refuse_missing(folder, manifest)
-    return OnDisk(Path(path), manifest)
-
-
-def refuse_missing(folder: Folder, manifest: Manifest) -> None:
-    """EnsembleError naming the first part that is missing or has another size than the manifest says."""
+    refuse_changed(manifest, folder.path / MANIFEST)
+    refuse_version(manifest.identity, path)
     for part in manifest.parts:
-        size = folder.size(part.file)
-        if size != part.bytes:
-            what = "is missing" if size < 0 else f"is damaged: {size} bytes, expected {part.bytes}"
-            raise EnsembleError(f"{folder.path / part.file} {what}; draw it again with --resume")
+        if folder.size(part.file) < 0:
+            raise EnsembleError(f"{folder.path / part.file} is missing; draw it again with --resume")
+    return OnDisk(Path(path), manifest)

@@ -52,7 +52,8 @@ def render(
     first_path : number of the first path; path 700 is the same path in every range that has it.
     workers : processes; None is what the size repays, up to the processors there are.
     reveal : names `series.label[.output]` to give as columns beside the series, or "all".
-    resume : go on with a render of the same spec that did not finish, or draw missing parts again.
+    resume : go on with a render of the same spec that did not finish; of a finished one, hold all values against
+        their digests and draw missing and damaged parts again.
     overwrite : remove the ensemble that is in `out` first.
     layout : "long": path, step, time (where the spec has a start), one column a series.
     progress : called with (rows drawn, rows in all), often.
@@ -162,16 +163,16 @@ class Job:
             "layout": self.layout,
             "reveal": list(self.reveal),
         }
-        self.present = Present(self.folder, self.whole, self.identity)
+        self.present = Present(self.folder, self.whole, self.identity, self.factory)
 
     def run(self, workers: int, resume: bool, overwrite: bool, progress: Progress | None) -> OnDisk:
         """Draw what is missing; nothing when all is there."""
-        if not overwrite and (found := self.present.complete(resume)) is not None:
+        if not overwrite and (found := self.present.complete(resume, progress)) is not None:
             self.folder.tidy()
             return OnDisk(self.folder.path, found, self.spec)
         with self.folder.locked() as descriptor:
             # another render may have finished while this one waited for the lock
-            if overwrite or (found := self.present.complete(resume)) is None:
+            if overwrite or (found := self.present.complete(resume, progress)) is None:
                 found = self._draw(workers, resume, overwrite, progress, descriptor)
         return OnDisk(self.folder.path, found, self.spec)
 

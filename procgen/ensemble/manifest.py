@@ -11,6 +11,7 @@ from dataclasses import asdict, dataclass, field
 from typing import Any
 
 from procgen.ensemble import digest
+from procgen.ensemble import seal as seals
 from procgen.ensemble.columns import TYPES, Column
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.plan import Block
@@ -58,6 +59,7 @@ class Manifest:
     portable: bool = True
     why_not_portable: str = ""
     versions: Mapping[str, str] = field(default_factory=dict)
+    changed: tuple[str, ...] = ()  # fields that are not what was written
 
     @property
     def digest(self) -> str:
@@ -69,6 +71,10 @@ class Manifest:
 
     def json(self) -> dict[str, Any]:
         """The manifest as it is written."""
+        data = self._fields()
+        return {**data, seals.SEAL: seals.seal(data)}
+
+    def _fields(self) -> dict[str, Any]:
         return {
             "procgen": FORMAT,
             "digest": self.digest,
@@ -92,7 +98,10 @@ class Manifest:
 
     @classmethod
     def read(cls, data: Mapping[str, Any], where: str) -> Manifest:
-        """The manifest from its JSON; EnsembleError when it is not one, or contradicts itself."""
+        """The manifest from its JSON; EnsembleError when it is not one, or its parts are not its ranges.
+
+        One that can be read, and is not as it was written, says so in `changed`.
+        """
         try:
             if data["procgen"] != FORMAT:
                 raise ValueError(f"its format is {data['procgen']!r}, this version reads {FORMAT}")
@@ -111,10 +120,9 @@ class Manifest:
                 portable=bool(data["portable"]),
                 why_not_portable=str(data["why_not_portable"]),
                 versions=dict(data["versions"]),
+                changed=seals.changed(data),
             )
             covers([part.block for part in manifest.parts], whole)
-            if manifest.digest != data["digest"]:
-                raise ValueError("its digest does not follow from its series' digests")
             if set(manifest.stored) | set(manifest.revealed) != {column.name for column in manifest.columns}:
                 raise ValueError("its digests and its columns name different series")
         except (KeyError, TypeError, AttributeError, ValueError) as error:

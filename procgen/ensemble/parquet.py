@@ -183,7 +183,7 @@ def read(
                     table = file.read_row_group(group, columns=names, use_threads=False)
                     yield from _blocks(path, table, here, part, columns, stamps)
     except (OSError, pa.ArrowException) as error:
-        raise EnsembleError(f"{path} is damaged: {_first_line(error)}; draw it again with --overwrite") from None
+        raise EnsembleError(f"{path} is damaged: {_first_line(error)}; draw it again with --resume") from None
     if row != part.rows:
         raise EnsembleError(f"{path} is damaged: expected {part.rows} rows ({part}), it has another number")
 

@@ -8,40 +8,48 @@ from itertools import groupby
 from typing import Any
 
 from procgen.ensemble import parquet
-from procgen.ensemble.ensemble import refuse_missing
+from procgen.ensemble.check import Reader, Tick
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.manifest import Manifest, covers
 from procgen.ensemble.plan import Block, Chain
+from procgen.ensemble.seal import refuse_changed
+from procgen.ensemble.source import FACTORY
 from procgen.ensemble.store import MANIFEST, PLAN, Folder
 
 
 class Present:
     """What a folder holds, seen by a render of `whole` that `identity` names."""
 
-    def __init__(self, folder: Folder, whole: Block, identity: Mapping[str, Any]):
-        self.folder, self.whole, self.identity = folder, whole, identity
+    def __init__(self, folder: Folder, whole: Block, identity: Mapping[str, Any], factory: str = FACTORY):
+        self.folder, self.whole, self.identity, self.factory = folder, whole, identity, factory
+        self.damaged: set[str] = set()  # files of parts that `complete` found to be so
 
-    def complete(self, resume: bool) -> Manifest | None:
+    def complete(self, resume: bool, progress: Tick | None = None) -> Manifest | None:
         """The manifest when all is there, None when there is something to draw.
 
-        Raises EnsembleError when it is another ensemble, or parts are missing and `resume` is not asked for.
+        With `resume` the values of all parts are held against their digests; else those of parts whose size is
+        another, since other bytes may hold the same values. Raises EnsembleError when it is another ensemble, or
+        something is missing, damaged or changed and `resume` is not asked for.
         """
         found = self._manifest()
         if found is None:
             return None
-        self._refuse_other(found.identity)
-        try:
-            refuse_missing(self.folder, found)
-        except EnsembleError:
-            if not resume:
-                raise
-            return None
-        return found
+        if not resume:
+            refuse_changed(found, self.folder.path / MANIFEST)
+        if not found.changed:  # else the parts say what they are
+            self._refuse_other(found.identity)
+        suspects = [part for part in found.parts if resume or self.folder.size(part.file) != part.bytes]
+        damages = Reader(self.folder.path, found, self.factory).examine(progress, suspects)[0] if suspects else []
+        if damages and not resume:
+            mend = "" if "--resume" in damages[0].sentence else "; draw it again with --resume"
+            raise EnsembleError(f"{self.folder.path / damages[0].file}: {damages[0].sentence}{mend}")
+        self.damaged = {damage.file for damage in damages}
+        return None if damages or found.changed else found
 
     def chains(self, resume: bool) -> tuple[Chain, ...] | None:
         """The chains of the render that is there, None when there is none; they are kept when it goes on."""
         found = self._manifest()
-        if found is not None:
+        if found is not None and found.whole == self.whole:
             return _chains([part.block for part in found.parts])
         plan = self.folder.read_json(PLAN)
         if plan is None:
@@ -68,7 +76,7 @@ class Present:
     def records(self, chains: Sequence[Chain]) -> dict[Block, dict[str, Any]]:
         """Records of the parts that are there, whole, and of this render."""
         found: dict[Block, dict[str, Any]] = {}
-        files, listed, sizes = set(self.folder.part_files()), self._listed(), self._sizes()
+        files, listed = set(self.folder.part_files()) - self.damaged, self._listed()
         for part in (part for chain in chains for part in chain):
             name = part.file(self.whole)
             if name not in files:
@@ -81,7 +89,7 @@ class Present:
                 raise EnsembleError(f"{error}; it is in the way and not ours: move it away") from None
             self._refuse_other(identity)
             size = self.folder.size(name)
-            if identity.get("part") == asdict(part) and sizes.get(name, size) == size:
+            if identity.get("part") == asdict(part):
                 found[part] = {"part": asdict(part), "bytes": size, "nodes": nodes}
         return found
 
@@ -96,13 +104,11 @@ class Present:
         data = self.folder.read_json(MANIFEST)
         return None if data is None else Manifest.read(data, str(self.folder.path / MANIFEST))
 
-    def _sizes(self) -> dict[str, int]:
-        found = self._manifest()
-        return {} if found is None else {part.file: part.bytes for part in found.parts}
-
     def _listed(self) -> set[str]:
         """Names of parts that the manifest or the plan in the folder lists, which makes them ours."""
-        return set(self._sizes()) | set((self.folder.read_json(PLAN) or {}).get("files", ()))
+        found = self._manifest()
+        mine = set() if found is None else {part.file for part in found.parts}
+        return mine | set((self.folder.read_json(PLAN) or {}).get("files", ()))
 
     def _is_ours(self, name: str) -> bool:
         try:

@@ -6,8 +6,9 @@ import random
 import pyarrow.parquet as pq
 import pytest
 
-from procgen.ensemble import EnsembleError, plan
+from procgen.ensemble import EnsembleError, open_ensemble, plan
 from procgen.ensemble.parquet import IDENTITY, NODES, schema
+from procgen.ensemble.seal import seal
 from tests.ensemble.fakes import fake_check, fake_render, fake_spec
 
 SPEC = fake_spec(seed=8, paths=2500, steps=20, columns={"x": {}, "y": {"decimals": 3}})
@@ -86,11 +87,55 @@ def test_a_part_with_the_values_and_nodes_of_another_spec_is_found(tmp_path, mad
     assert "it has other values than the manifest says" in fake_check(made.path).text()
 
 
-def test_a_manifest_whose_digests_were_changed_is_found(made):
-    path = made.path / "manifest.json"
-    path.write_text(path.read_text().replace(made.manifest.stored["x"], "0" * 64))
-    with pytest.raises(EnsembleError, match="its digest does not follow from its series' digests"):
-        fake_check(made.path)
+def edit(ens, change, again=False):
+    """Change the manifest as anyone with an editor can; `again` makes its seal fit."""
+    path = ens.path / "manifest.json"
+    data = json.loads(path.read_text())
+    change(data)
+    path.write_text(json.dumps(data | {"seal": seal(data)} if again else data))
+
+
+@pytest.mark.parametrize(
+    "change,name",
+    [
+        (lambda m: m["identity"].update(stream_version=9), "identity.stream_version is 9, and 1 in the part"),
+        (lambda m: m["identity"].update(seed=9), "identity.seed is 9, and 8 in the part"),
+        (lambda m: m["spec"]["raw"].update(seed=9), "the spec in it is not the one that was drawn"),
+        (lambda m: m["spec"]["canonical"].update(seed=9), "spec.canonical is not what spec.raw means"),
+        (lambda m: m["digests"]["drawn"].update(ensemble="0" * 64), "digests.drawn"),
+        (lambda m: m["digests"]["stored"]["series"].update(x="0" * 64), "digests.stored"),
+        (lambda m: m.update(digest="0" * 64), "after it was written: digest"),
+        (lambda m: m["versions"].update(numpy="0"), "versions.numpy"),
+        (lambda m: m["seal"].update(digest="0" * 64), "seal"),
+        (lambda m: m.pop("seal"), "seal"),
+        (lambda m: m.update(note="mine"), "note"),
+    ],
+)
+def test_a_changed_field_of_the_manifest_is_named_and_resume_writes_it_anew(made, change, name):
+    before = made.manifest.json()
+    edit(made, change)
+    found = fake_check(made.path, redraw=True)
+    assert not found.ok and name in found.text() and "--resume" in found.text()
+    with pytest.raises(EnsembleError, match=r"manifest.json was changed after it was written \("):
+        open_ensemble(made.path)
+    with pytest.raises(EnsembleError, match=r"manifest.json was changed after it was written \("):
+        fake_render(SPEC, made.path)
+    assert fake_render(SPEC, made.path, resume=True).manifest.json() == before
+    assert fake_check(made.path).ok
+
+
+@pytest.mark.parametrize("name,value", [("seed", 9), ("stream_version", 9), ("layout", "wide"), ("paths", 2499)])
+def test_an_identity_that_was_changed_and_sealed_again_is_held_against_the_parts(made, name, value):
+    edit(made, lambda m: m["identity"].update({name: value}), again=True)
+    found = fake_check(made.path)
+    assert not found.ok and f"identity.{name} is {value}" in found.text()
+
+
+def test_another_stream_version_is_refused(made, monkeypatch):
+    monkeypatch.setattr("procgen.ensemble.seal.STREAM_VERSION", 9)
+    for read in (fake_check, open_ensemble):
+        with pytest.raises(EnsembleError, match="was drawn with stream version 1, and this procgen draws version 9"):
+            read(made.path)
 
 
 def test_every_part_that_is_cut_or_has_a_flipped_bit_is_named_or_unharmed(made):

@@ -8,6 +8,7 @@ import pytest
 
 from procgen.chance.laws import LAWS
 from procgen.ensemble import EnsembleError, check_digest, digest, open_ensemble, plan, render
+from procgen.ensemble.seal import seal
 from procgen.spec.reader import read_text
 from procgen.terms import catalogue
 
@@ -110,8 +111,14 @@ def test_a_spec_changed_in_the_manifest_is_refused(tmp_path, spec):
     render(spec, tmp_path)
     path = tmp_path / "manifest.json"
     path.write_text(path.read_text().replace('"sd": 6.3', '"sd": 6.4'))
+    assert "the spec in it is not the one that was drawn" in check_digest(tmp_path).text()
+    with pytest.raises(EnsembleError, match=r"was changed after it was written \(spec.raw, spec.canonical\)"):
+        open_ensemble(tmp_path)
+    data = json.loads(path.read_text())
+    path.write_text(json.dumps(data | {"seal": seal(data)}))
+    assert not check_digest(tmp_path, redraw=True).ok
     with pytest.raises(EnsembleError, match="is not the one that was drawn"):
-        open_ensemble(tmp_path).spec  # noqa: B018
+        open_ensemble(tmp_path)
 
 
 def test_an_explosive_value_is_named_before_it_is_written(tmp_path):

@@ -10,11 +10,11 @@ import subprocess
 import time
 
 import numpy as np
-import pyarrow.parquet as pq
+import pandas as pd
 import pytest
 
 from procgen.ensemble import EnsembleError, open_ensemble, plan
-from procgen.ensemble.parquet import NODES, footer
+from procgen.ensemble.parquet import footer
 from procgen.ensemble.plan import STEPS
 from procgen.ensemble.store import PART
 from tests.ensemble.fakes import fake_check, fake_render, fake_spec, start, visible
@@ -198,7 +198,7 @@ def test_a_missing_part_is_named_and_drawn_again(tmp_path, monkeypatch):
     monkeypatch.setattr(plan, "PART_BYTES", PARTS["part_bytes"])
     made = fake_render(fake_spec(**WIDE), tmp_path)
     (tmp_path / made.manifest.parts[2].file).unlink()
-    with pytest.raises(EnsembleError, match=f"{made.manifest.parts[2].file} is missing; draw it again"):
+    with pytest.raises(EnsembleError, match=f"{made.manifest.parts[2].file}: the part is missing; draw it again"):
         fake_render(fake_spec(**WIDE), tmp_path)
     with pytest.raises(EnsembleError, match="is missing"):
         open_ensemble(tmp_path)
@@ -255,16 +255,64 @@ def test_a_damaged_plan_is_said_and_can_be_overwritten(tmp_path):
     assert fake_render(spec, tmp_path, overwrite=True).digest == made.digest
 
 
-def test_a_part_of_another_size_is_drawn_again_even_when_it_says_that_it_is_ours(tmp_path):
+def rewrite(path, change):
+    """A part written again by another program: another size, no word of ours in its metadata."""
+    frame = pd.read_parquet(path)
+    change(frame)
+    frame.to_parquet(path, compression="gzip")
+
+
+def test_a_part_of_another_size_with_the_same_values_is_whole(tmp_path):
     spec = fake_spec(paths=20, steps=5)
     made = fake_render(spec, tmp_path)
     path = tmp_path / made.manifest.parts[0].file
-    table = pq.read_table(path)
-    metadata = {**table.schema.metadata, NODES: pq.read_metadata(path).metadata[NODES]}
-    changed = table.set_column(2, table.schema.field("x"), [np.zeros(100)])
-    pq.write_table(changed.replace_schema_metadata(metadata), path)
-    with pytest.raises(EnsembleError, match=r"is damaged: \d+ bytes, expected \d+; draw it again with --resume"):
+    rewrite(path, lambda frame: None)
+    assert path.stat().st_size != made.manifest.parts[0].bytes
+    written = path.read_bytes()
+    for how in ({}, {"resume": True}):
+        assert fake_render(spec, tmp_path, **how).digest == made.digest
+    assert path.read_bytes() == written
+    assert np.array_equal(open_ensemble_of_fakes(tmp_path)["x"], made["x"])
+    assert fake_check(tmp_path, redraw=True).ok
+
+
+def test_a_part_of_another_size_with_another_value_is_drawn_again(tmp_path):
+    spec = fake_spec(paths=20, steps=5)
+    made = fake_render(spec, tmp_path)
+    path = tmp_path / made.manifest.parts[0].file
+
+    def change(frame):
+        frame.loc[37, "x"] += 0.25
+
+    rewrite(path, change)
+    with pytest.raises(EnsembleError, match=r"other values than the manifest says.*; draw it again with --resume"):
         fake_render(spec, tmp_path)
+    found = fake_check(tmp_path, redraw=True)
+    assert "render again with --resume" in found.text() and "--overwrite" not in found.text()
+    assert (found.difference.series, found.difference.path, found.difference.step) == ("x", 7, 2)
     again = fake_render(spec, tmp_path, resume=True)
     assert again.digest == made.digest
     assert fake_check(tmp_path).ok
+
+
+@pytest.mark.parametrize("damage", [lambda data: data[:300], lambda data: b"", lambda data: flipped(data)])
+def test_resume_draws_a_damaged_part_again_whatever_its_size(tmp_path, damage):
+    spec = fake_spec(paths=20, steps=5)
+    made = fake_render(spec, tmp_path)
+    path = tmp_path / made.manifest.parts[0].file
+    whole = path.read_bytes()
+    path.write_bytes(damage(whole))
+    assert "--resume" in fake_check(tmp_path).text() and not fake_check(tmp_path).ok
+    fake_render(spec, tmp_path, resume=True)
+    assert path.read_bytes() == whole
+
+
+def flipped(data):
+    """The file with one bit of its last value changed, and its size as it was."""
+    place = data.index(fake_render(fake_spec(paths=20, steps=5))["x"][-1, -1].tobytes())
+    return data[:place] + bytes([data[place] ^ 1]) + data[place + 1 :]
+
+
+def open_ensemble_of_fakes(path):
+    """The finished ensemble in `path`; the spec of a fake is read by its own factory."""
+    return fake_render(fake_spec(paths=20, steps=5), path)
