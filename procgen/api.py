@@ -2,20 +2,19 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
     from procgen.spec.model import Spec
 
 
-def load(path: str | Path) -> Spec:
-    """The checked spec of a YAML file.
+def load(spec: str | Path | Mapping[str, Any] | Spec) -> Spec:
+    """The checked spec of a YAML file, or of a mapping in the spec language.
 
-    Raises SpecError with every fault and its place, also when the file cannot be read.
+    Raises SpecError with every fault and its place, also when the file cannot be read; TypeError for anything else.
     """
-    from procgen.chance.laws import LAWS
-    from procgen.spec.reader import read_file
-    from procgen.terms import catalogue
+    from procgen.terms.given import spec_of
 
-    return read_file(path, catalogue(), LAWS)
+    return spec_of(spec)

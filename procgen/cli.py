@@ -21,6 +21,24 @@ app = typer.Typer(
     pretty_exceptions_enable=False,
 )
 
+
+def _version(wanted: bool) -> None:
+    if wanted:
+        from procgen import __version__
+
+        printed(f"procgen {__version__}")
+        raise typer.Exit
+
+
+@app.callback()
+def common(
+    version: Annotated[
+        bool, typer.Option("--version", help="Print the version.", callback=_version, is_eager=True)
+    ] = False,
+) -> None:
+    pass
+
+
 SpecFile = Annotated[Path, typer.Argument(metavar="SPEC", help="The spec, a YAML file.", show_default=False)]
 Json = Annotated[bool, typer.Option("--json", help="Print JSON instead of text.")]
 
@@ -48,7 +66,7 @@ def column_of(text: str) -> tuple[str, str]:
 @guarded
 def render(
     spec: SpecFile,
-    out: Annotated[Path, typer.Option("-o", "--out", metavar="OUT", help="Folder to write.", show_default=False)],
+    out: Annotated[str, typer.Option("-o", "--out", metavar="OUT", help="Folder to write.", show_default=False)],
     paths: Annotated[
         int | None, typer.Option(metavar="N", help="Number of paths, instead of the spec's.", min=1)
     ] = None,
@@ -65,7 +83,9 @@ def render(
         str | None,
         typer.Option(metavar="all|NAME,…", help="Terms and hidden outputs to write beside the series."),
     ] = None,
-    resume: Annotated[bool, typer.Option("--resume", help="Go on with a render that was stopped.")] = False,
+    resume: Annotated[
+        bool, typer.Option("--resume", help="Go on with a render that was stopped, or mend one.")
+    ] = False,
     overwrite: Annotated[bool, typer.Option("--overwrite", help="Remove the ensemble that is in OUT first.")] = False,
     scheduler: Annotated[str, typer.Option(metavar="local", help="Who draws: this machine.")] = "local",
 ) -> None:

@@ -9,6 +9,7 @@ import signal
 import subprocess
 import sys
 import time
+from importlib import metadata
 from pathlib import Path
 
 import numpy as np
@@ -73,6 +74,11 @@ def test_the_options_are_those_that_were_promised():
     for name, options in promised.items():
         page = Result(name, "-h").out
         assert [option for option in options.split() if option not in page] == []
+
+
+def test_the_version_is_that_of_the_package():
+    assert Result("--version").out == f"procgen {pg.__version__}\n"
+    assert metadata.version("procgen") == pg.__version__
 
 
 def test_help_imports_nothing_heavy():
@@ -241,6 +247,13 @@ def test_a_foreign_or_unreadable_parquet(tmp_path, rendered):
     assert result.code in (1, 2) and part.name in result.out + result.err and "Traceback" not in result.err
 
 
+def test_a_render_that_can_never_succeed_leaves_no_folder(tmp_path):
+    spec = tmp_path / "spec.yaml"
+    spec.write_text("procgen: 1\nseed: 1\npaths: 10\ntime: {steps: 5}\nseries:\n  x: [{exp: [{constant: 800}]}]\n")
+    assert "path 0, step 0 is inf" in refused(Result("render", str(spec), "-o", str(tmp_path / "out")))
+    assert not (tmp_path / "out").exists()
+
+
 def test_a_part_that_is_missing(rendered):
     next(rendered.glob("*.parquet")).unlink()
     assert "paths-000000000" in refused(Result("validate", str(rendered)))
@@ -281,6 +294,7 @@ def test_more_than_the_disk_holds_is_refused_with_the_figure(tmp_path, monkeypat
     "arguments",
     [
         ["render", PUMP],
+        ["render", PUMP, "-o", ""],
         ["render", PUMP, "-o", "x", "--paths", "0"],
         ["render", PUMP, "-o", "x", "--paths", "many"],
         ["render", PUMP, "-o", "x", "--workers", "-1"],
@@ -335,8 +349,7 @@ def test_a_full_disk_leaves_nothing_that_looks_whole_and_resume_goes_on(tmp_path
     done = subprocess.run(["sh", "-c", command], capture_output=True, text=True)
     assert done.returncode == 2, done.stderr
     assert done.stderr.startswith("procgen: ") and "Traceback" not in done.stderr
-    assert not (out / "manifest.json").exists() and not list(out.glob("*.parquet"))
-    assert "--resume" in refused(Result("render", PUMP, "-o", str(out)))
+    assert not out.exists()  # not one part was whole, so that there is nothing to go on with
     refused(Result("validate", str(out)))
     assert Result("render", PUMP, "-o", str(out), "--resume").code == 0
     assert pg.open_ensemble(out).digest == pg.render(pg.load(PUMP)).digest

@@ -28,10 +28,13 @@ class Origin(Protocol):
 
 
 def origin(data: Any, spec: Any, columns: Mapping[str, str] | None) -> Origin:
-    """The origin behind whatever was given to `validate`; TableError when nothing can be read from it."""
-    from procgen.checks.validate import read_spec
+    """The origin behind whatever was given to `validate`; TableError when nothing can be read from it.
 
-    spec = read_spec(spec)
+    TypeError when it is no kind of data, or `spec` is no kind of spec.
+    """
+    from procgen.terms.given import spec_of
+
+    spec = None if spec is None else spec_of(spec)
     if isinstance(data, str | Path):
         path = Path(data)
         if not path.exists():
@@ -52,7 +55,7 @@ def origin(data: Any, spec: Any, columns: Mapping[str, str] | None) -> Origin:
 
         _need_spec(spec, "the table")
         return from_frame(data, spec, columns)
-    raise TableError(f"expected an ensemble, a DataFrame, or the path of one, got {type(data).__name__}")
+    raise TypeError(f"expected an ensemble, a DataFrame, or the path of one, got {type(data).__name__}")
 
 
 def _need_spec(spec: Any, what: object) -> None:

@@ -13,13 +13,13 @@ from procgen.chance.streams import STREAM_VERSION
 from procgen.ensemble import digest, parquet
 from procgen.ensemble.columns import store
 from procgen.ensemble.draw import Drawer, empty
-from procgen.ensemble.ensemble import Blocks
+from procgen.ensemble.ensemble import Blocks, Ensemble, OnDisk
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.manifest import Manifest, PartRecord, node
 from procgen.ensemble.plan import Block
 from procgen.ensemble.seal import contradictions, other_than_part, refuse_version
 from procgen.ensemble.source import FACTORY, open_source, read_spec
-from procgen.ensemble.store import MANIFEST, Folder
+from procgen.ensemble.store import MANIFEST, Folder, folder_path
 
 PLACES = 16  # ranges of paths that are drawn again when all would be too many
 ROWS = 4_000_000  # rows that are drawn again
@@ -96,7 +96,7 @@ class DigestResult:
 
 
 def check_digest(
-    path: str | Path,
+    path: str | Path | Ensemble,
     expect: str | None = None,
     redraw: bool = False,
     *,
@@ -107,7 +107,7 @@ def check_digest(
 
     Parameters
     ----------
-    path : folder that `render` has finished.
+    path : folder that `render` has finished, or the ensemble that is in it.
     expect : 64 hex digits that the ensemble's digest should be.
     redraw : draw values again as well: those of damaged parts, or else of paths spread over the range (all of
         them up to 4 million rows), and name the first that differs.
@@ -115,11 +115,13 @@ def check_digest(
 
     Raises EnsembleError when there is no manifest to compare with, or `expect` is no digest.
     """
+    if isinstance(path, Ensemble):
+        path = _home(path)
     if expect is not None:
         expect = expect.strip().lower()
         if not re.fullmatch("[0-9a-f]{64}", expect):
             raise EnsembleError(f"expected a digest of 64 hex digits, got {expect!r}")
-    folder = Folder(Path(path))
+    folder = Folder(folder_path(path, "path"))
     data = folder.read_json(MANIFEST)
     if data is None:
         raise EnsembleError(f"{path} has no {MANIFEST}; expected a folder that procgen render has finished")
@@ -148,6 +150,14 @@ def check_digest(
         redrawn=tuple(places),
         difference=reader.first_difference(places),
     )
+
+
+def _home(ensemble: Ensemble) -> Path:
+    if not isinstance(ensemble, OnDisk):
+        raise EnsembleError(
+            "the ensemble is in memory and has no files to check; .digest is that of its values, and out= writes files"
+        )
+    return ensemble.path
 
 
 def _root_damages(manifest: Manifest, roots: Mapping[str, str], damages: list[Damage]) -> list[Damage]:

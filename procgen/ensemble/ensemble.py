@@ -16,7 +16,7 @@ from procgen.ensemble.manifest import Manifest, bytes_text
 from procgen.ensemble.plan import Block
 from procgen.ensemble.seal import contradictions, refuse_changed, refuse_version
 from procgen.ensemble.source import read_spec
-from procgen.ensemble.store import MANIFEST, PLAN, Folder
+from procgen.ensemble.store import MANIFEST, PLAN, Folder, folder_path
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -208,7 +208,7 @@ def open_ensemble(path: str | Path) -> OnDisk:
     Raises EnsembleError when there is none, when it was changed, when it is unfinished, when parts are missing,
     or when it was drawn with another stream version.
     """
-    folder = Folder(Path(path))
+    folder = Folder(folder_path(path, "path"))
     data = folder.read_json(MANIFEST)
     if data is None:
         unfinished = (folder.path / PLAN).exists()
@@ -223,4 +223,4 @@ def open_ensemble(path: str | Path) -> OnDisk:
     for part in manifest.parts:
         if folder.size(part.file) < 0:
             raise EnsembleError(f"{folder.path / part.file} is missing; draw it again with --resume")
-    return OnDisk(Path(path), manifest)
+    return OnDisk(folder.path, manifest)

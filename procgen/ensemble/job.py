@@ -20,7 +20,8 @@ from procgen.ensemble.part import Task, row_bytes
 from procgen.ensemble.plan import Block, Chain, batches, chains, narrow_steps
 from procgen.ensemble.present import Present
 from procgen.ensemble.source import FACTORY, Source, open_source, remember, revealable
-from procgen.ensemble.store import MANIFEST, Folder
+from procgen.ensemble.store import MANIFEST, Folder, folder_path
+from procgen.terms.given import spec_of
 
 LAYOUTS = ("long",)
 MOST = 2**48  # paths, and steps: far beyond what can be stored, and safe in every int64
@@ -46,7 +47,7 @@ def render(
 
     Parameters
     ----------
-    spec : Spec
+    spec : Spec, or what `procgen.load` takes: the path of a YAML file, or a mapping in the spec language
     out : folder to write; what is not ours in it is left alone. None: in memory, in this process.
     paths, steps, seed : instead of what the spec says.
     first_path : number of the first path; path 700 is the same path in every range that has it.
@@ -65,31 +66,32 @@ def render(
         raise EnsembleError(f"expected layout {' or '.join(LAYOUTS)}, got {layout!r}")
     if resume and overwrite:
         raise EnsembleError("resume goes on with what is there and overwrite removes it; give one of them")
+    if out is None and (resume or overwrite):
+        word = "resume" if resume else "overwrite"
+        raise EnsembleError(f"{word} is about a folder, and there is none; give out=, or leave {word} away")
+    if out is not None:
+        folder = folder_path(out, "out")
+    if workers is not None:
+        _whole("workers", workers, 1)
+    spec = spec_of(spec) if factory == FACTORY else spec
     changes = {"paths": paths, "steps": steps, "seed": seed}
     if any(value is not None for value in changes.values()):
         spec = spec.changed(**changes)
     names = _reveal(spec, reveal)
     source = remember(spec, names) if factory == FACTORY else open_source(spec.raw, names, factory)
-    whole = Block(_first(first_path), spec.paths, 0, spec.time.steps)
+    whole = Block(_whole("first_path", first_path, 0), spec.paths, 0, spec.time.steps)
     if max(whole.end_path, whole.steps) > MOST:
         raise EnsembleError(f"expected at most {MOST} paths and steps, got {whole}")
     if out is None:
         return _in_memory(source, whole, progress)
-    job = Job(spec, source, whole, Folder(Path(out)), names, layout, factory)
-    return job.run(_workers(workers, whole.rows * len(source.columns)), resume, overwrite, progress)
+    job = Job(spec, source, whole, Folder(folder), names, layout, factory)
+    workers = engines.default_workers(whole.rows * len(source.columns)) if workers is None else workers
+    return job.run(workers, resume, overwrite, progress)
 
 
-def _first(value: int) -> int:
-    if isinstance(value, bool) or not isinstance(value, int) or value < 0:
-        raise EnsembleError(f"expected first_path to be a whole number of at least 0, got {value!r}")
-    return value
-
-
-def _workers(value: int | None, values: int) -> int:
-    if value is None:
-        return engines.default_workers(values)
-    if isinstance(value, bool) or not isinstance(value, int) or value < 1:
-        raise EnsembleError(f"expected workers to be a whole number of at least 1, got {value!r}")
+def _whole(name: str, value: int, least: int) -> int:
+    if isinstance(value, bool) or not isinstance(value, int) or value < least:
+        raise EnsembleError(f"expected {name} to be a whole number of at least {least}, got {value!r}")
     return value
 
 
@@ -179,9 +181,9 @@ class Job:
     def _draw(
         self, workers: int, resume: bool, overwrite: bool, progress: Progress | None, descriptor: int | None
     ) -> Manifest:
+        self._refuse_too_large()
         if overwrite:
             self.present.remove()
-        self._refuse_too_large()
         plan = self.present.chains(resume) or chains(self.whole, row_bytes(self.columns), workers)
         there = self.present.records(plan)
         self.folder.clean_state(keep_plan=True)

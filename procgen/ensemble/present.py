@@ -72,6 +72,7 @@ class Present:
         blocks = [(part.first_path, part.paths, part.first_step, part.steps) for part in parts]
         files = [part.file(self.whole) for part in parts]
         self.folder.write_json(PLAN, {"identity": self.identity, "files": files, "parts": blocks})
+        self.folder.begun = True
 
     def records(self, chains: Sequence[Chain]) -> dict[Block, dict[str, Any]]:
         """Records of the parts that are there, whole, and of this render."""

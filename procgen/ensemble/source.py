@@ -60,13 +60,11 @@ class SpecSource:
         return SpecRun(self.graph, first_path, paths, reveal=self.reveal)
 
 
-def read_spec(raw: Mapping[str, Any], file: str | None = None) -> Any:
+def read_spec(raw: Mapping[str, Any]) -> Any:
     """The Spec that `raw` describes; SpecError with every fault."""
-    from procgen.chance.laws import LAWS
-    from procgen.spec.reader import read_raw
-    from procgen.terms import catalogue
+    from procgen.terms.given import spec_of
 
-    return read_raw(dict(raw), catalogue(), LAWS)
+    return spec_of(raw)
 
 
 def spec_source(raw: Mapping[str, Any], reveal: tuple[str, ...]) -> Source:

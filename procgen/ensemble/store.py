@@ -25,12 +25,22 @@ PART = re.compile(r"paths-\d{9,}-\d{9,}(\.steps-\d{9,}-\d{9,})?\.parquet")
 PATIENCE = 3.0  # seconds: workers whose parent was killed are gone by then
 
 
+def folder_path(value: Any, name: str) -> Path:
+    """The path of a folder; TypeError for what is no path, EnsembleError for an empty one."""
+    if not isinstance(value, str | os.PathLike):
+        raise TypeError(f"expected {name} to be the path of a folder, got {type(value).__name__}")
+    if not os.fspath(value):
+        raise EnsembleError(f"expected {name} to be the path of a folder, got an empty text; give one, such as build/a")
+    return Path(value)
+
+
 class Folder:
     """The files of one ensemble; errors of the operating system become sentences."""
 
     def __init__(self, path: Path):
         self.path = path
         self.state = path / ".state"
+        self.begun = False  # whether the plan that is there is the one of this render
 
     @contextlib.contextmanager
     def writing(self, name: str) -> Iterator[Path]:
@@ -121,8 +131,10 @@ class Folder:
         """Hold OUT for this process and the workers that inherit the lock's file descriptor.
 
         The operating system drops the lock when the last of them ends, however it ends. Without `fcntl`
-        (Windows) nothing is locked. At the end .state is removed, unless it holds a plan to go on with.
+        (Windows) nothing is locked. At the end .state is removed, unless it holds a plan to go on with; after a
+        failure that left nothing whole there is nothing to go on with, and folders that were made are removed.
         """
+        made = [folder for folder in (self.path, *self.path.parents) if not folder.exists()]
         if self.state.is_symlink():
             raise EnsembleError(f"{self.state} is a link to another place; remove it, or choose another OUT")
         try:
@@ -131,13 +143,21 @@ class Folder:
             raise EnsembleError(f"{error.filename} is not a folder; choose another OUT") from None
         except OSError as error:
             raise EnsembleError(system_sentence(error, f"making {self.path}")) from None
+        failed, others = True, (self.path / PLAN).exists()
         try:
             yield descriptor
+            failed = False
         finally:
-            if not (self.path / PLAN).exists():
-                with contextlib.suppress(OSError):
+            ours = self.begun or not others
+            empty = failed and ours and not self.part_files() and self.size(MANIFEST) < 0
+            with contextlib.suppress(OSError, EnsembleError):
+                if empty:
+                    self.clean_state(keep_plan=False)
+                if not (self.path / PLAN).exists():
                     (self.state / "lock").unlink()
                     self.state.rmdir()
+                for folder in made if empty else ():
+                    folder.rmdir()
             os.close(descriptor)
 
     def _lock(self, give_up: float) -> int:

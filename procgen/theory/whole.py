@@ -100,14 +100,16 @@ def theory(spec: Any, graph: Any = None) -> Theory:
 
     Parameters
     ----------
-    spec : Spec
+    spec : Spec, or what `procgen.load` takes: the path of a YAML file, or a mapping in the spec language
     graph : the graph of its terms; built when not given
 
     Each term writes its moments on one axis; a term without closed moments counts as unknown, with the reason.
     """
     if graph is None:
+        from procgen.terms.given import spec_of
         from procgen.terms.graph import build
 
+        spec = spec_of(spec)
         graph = build(spec)
     names, matrix = spec.correlation.names, spec.correlation.matrix
     correlation = {

@@ -102,7 +102,7 @@ def test_another_spec_is_held_against_it(out):
 def test_false_alarm_must_be_a_probability(out):
     with pytest.raises(ValueError, match="between 0 and 1, got 2"):
         validate(out, false_alarm=2)
-    with pytest.raises(ValueError, match="expected an ensemble, a DataFrame, or the path of one, got int"):
+    with pytest.raises(TypeError, match="expected an ensemble, a DataFrame, or the path of one, got int"):
         validate(3)
 
 

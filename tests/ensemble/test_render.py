@@ -6,7 +6,7 @@ import pytest
 
 from procgen.ensemble import EnsembleError, open_ensemble, plan
 from procgen.ensemble.plan import STEPS
-from tests.ensemble.fakes import fake_render, fake_spec
+from tests.ensemble.fakes import fake_check, fake_render, fake_spec
 
 COLUMNS = {"x": {}, "y": {"decimals": 2, "unit": "kW"}, "n": {"type": "int64"}, "s": {"type": "float32"}}
 SPEC = fake_spec(seed=5, paths=1100, steps=30, columns=COLUMNS)
@@ -125,7 +125,7 @@ def test_sizes_are_refused_before_anything_is_drawn(tmp_path):
     huge = fake_spec(paths=10**9, steps=10**6)
     with pytest.raises(EnsembleError, match=r"take about 8 PB, and .* has .* free; ask for fewer paths"):
         fake_render(huge, tmp_path / "out")
-    assert not (tmp_path / "out" / ".state").exists()
+    assert not (tmp_path / "out").exists()
     with pytest.raises(EnsembleError, match=r"take 8 PB in memory, and .* are free; give out="):
         fake_render(huge)
     with pytest.raises(EnsembleError, match="expected at most"):
@@ -144,6 +144,32 @@ def test_sizes_are_refused_before_anything_is_drawn(tmp_path):
 def test_wrong_arguments_are_explained(tmp_path, how, sentence):
     with pytest.raises(EnsembleError, match=sentence):
         fake_render(SPEC, tmp_path, **how)
+
+
+@pytest.mark.parametrize(
+    "how,sentence",
+    [
+        ({"workers": -1}, "expected workers to be a whole number of at least 1, got -1"),
+        ({"overwrite": True}, "overwrite is about a folder, and there is none; give out="),
+        ({"resume": True}, "resume is about a folder, and there is none; give out="),
+        ({"out": ""}, "expected out to be the path of a folder, got an empty text"),
+    ],
+)
+def test_wrong_arguments_are_explained_in_memory_too(how, sentence):
+    with pytest.raises(EnsembleError, match=sentence):
+        fake_render(SPEC, **how)
+
+
+def test_a_digest_is_checked_of_what_is_on_disk(tmp_path, memory):
+    made = fake_render(SPEC, tmp_path)
+    assert fake_check(made).digest == made.digest == memory.digest
+    with pytest.raises(EnsembleError, match="the ensemble is in memory and has no files"):
+        fake_check(memory)
+    for call in (fake_check, open_ensemble):
+        with pytest.raises(TypeError, match="expected path to be the path of a folder, got int"):
+            call(3)
+    with pytest.raises(TypeError, match="expected out to be the path of a folder, got bool"):
+        fake_render(SPEC, True)
 
 
 def test_unknown_names_and_ranges_are_explained(memory):

@@ -255,6 +255,31 @@ def test_a_damaged_plan_is_said_and_can_be_overwritten(tmp_path):
     assert fake_render(spec, tmp_path, overwrite=True).digest == made.digest
 
 
+@pytest.mark.parametrize("there", [False, True])
+def test_a_render_that_can_never_succeed_leaves_nothing(tmp_path, monkeypatch, there):
+    out = tmp_path / "a" / "b"
+    keep = fake_spec(paths=20, steps=5, bad=[7, 3, "inf"])
+    if there:
+        out.mkdir(parents=True)
+        (out / "notes").write_text("mine")
+    with pytest.raises(EnsembleError, match="path 7, step 3 is inf"):
+        fake_render(keep, out)
+    monkeypatch.setattr(shutil, "disk_usage", lambda path: type("usage", (), {"free": 10}))
+    with pytest.raises(EnsembleError, match="has 10 B free"):
+        fake_render(fake_spec(paths=20, steps=5), out)
+    assert [path.name for path in tmp_path.rglob("*")] == (["a", "b", "notes"] if there else [])
+    with pytest.raises(EnsembleError, match=r"has no manifest\.json; expected a folder"):
+        open_ensemble(out)
+
+
+def test_an_ensemble_is_not_removed_for_one_that_is_too_large(tmp_path, monkeypatch):
+    made = fake_render(fake_spec(paths=20, steps=5), tmp_path)
+    monkeypatch.setattr(shutil, "disk_usage", lambda path: type("usage", (), {"free": 10}))
+    with pytest.raises(EnsembleError, match="has 10 B free"):
+        fake_render(fake_spec(paths=2000, steps=5), tmp_path, overwrite=True)
+    assert open_ensemble(tmp_path).digest == made.digest
+
+
 def rewrite(path, change):
     """A part written again by another program: another size, no word of ours in its metadata."""
     frame = pd.read_parquet(path)
