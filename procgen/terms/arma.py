@@ -12,6 +12,7 @@ from procgen.terms.base import LAW, SD, TOTAL_SD, Ahead, Term, Unknown, number, 
 from procgen.terms.start import JointStart, Member, companion, decay_length, partial_autocorrelations
 
 FORGOTTEN = 1e-9
+LONGEST = 5_000  # coefficients
 
 
 @kernel
@@ -75,6 +76,10 @@ class Arma(Term):
     @classmethod
     def check(cls, values):
         phi, theta, before = values.get("phi", ()), values.get("theta", ()), values["before"]
+        for name, part in (("phi", phi), ("theta", theta)):
+            if len(part) > LONGEST:
+                yield name, f"expected at most {LONGEST:,} coefficients, got {len(part):,}; sample more coarsely"
+                return
         if before is not None:
             if len(before["x"]) < len(phi):
                 yield (

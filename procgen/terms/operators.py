@@ -8,6 +8,7 @@ from procgen.spec.declare import Body, Parameter, Real, Whole
 from procgen.terms.base import Ahead, Term, number
 from procgen.terms.walk import accumulate
 
+FURTHEST = 100_000  # steps that an operator reads back
 OF = Parameter("of", "", Body(), "what it is applied to; a list is a sum")
 
 
@@ -21,7 +22,7 @@ class Lag(Term):
     composition = True
     parameters = (
         OF,
-        Parameter("by", "k", Whole(at_least=0, at_most=100_000), "how many steps earlier", default=1),
+        Parameter("by", "k", Whole(at_least=0, at_most=FURTHEST), "how many steps earlier", default=1),
     )
 
     def reach(self, head):
@@ -60,9 +61,18 @@ class Difference(Term):
     composition = True
     parameters = (
         OF,
-        Parameter("by", "s", Whole(at_least=1, at_most=100_000), "how many steps back it compares with", default=1),
+        Parameter("by", "s", Whole(at_least=1, at_most=FURTHEST), "how many steps back it compares with", default=1),
         Parameter("order", "d", Whole(at_least=1, at_most=12), "how often it is applied", default=1),
     )
+
+    @classmethod
+    def check(cls, values):
+        if values["order"] * values["by"] > FURTHEST:
+            yield (
+                "by",
+                f"expected at most {FURTHEST:,} steps read back in all (order × by), got "
+                f"{values['order'] * values['by']:,}; lower `by` or `order`",
+            )
 
     def reach(self, head):
         return (head + self.by * self.order,)

@@ -11,7 +11,7 @@ Everything here makes values: only portable operations (see `procgen.chance.port
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from functools import cached_property
 
@@ -21,6 +21,7 @@ from procgen.chance.portable import cholesky, matmul
 
 Array = np.ndarray
 NEGLIGIBLE = 1e-12
+DENSE = 40  # orders up to which a lone autoregression starts through the factor of its covariance
 LONGEST = 2**19  # steps of burn-in; 16 paths of it fit in memory
 
 
@@ -30,16 +31,58 @@ def partial_autocorrelations(phi: Sequence[float]) -> list[float] | None:
     Source: Durbin (1960); Barndorff-Nielsen & Schou (1973): the recursion has a causal stationary
     solution exactly when every one of them is inside the unit interval.
     """
-    a = [float(c) for c in phi]
     partials: list[float] = []
-    while a:
-        k = a[-1]
-        if not -1.0 < k < 1.0:
+    for a in _orders(phi):
+        if not -1.0 < a[-1] < 1.0:
             return None
-        partials.append(k)
-        scale = 1.0 - k * k
-        a = [(a[i] + k * a[len(a) - 2 - i]) / scale for i in range(len(a) - 1)]
+        partials.append(float(a[-1]))
     return partials[::-1]
+
+
+def _orders(phi: Sequence[float]) -> Iterator[Array]:
+    """Best linear predictors from the last p, p − 1, …, 1 values, by step-down; the first is phi itself."""
+    a = np.array([float(c) for c in phi])
+    while len(a):
+        yield a
+        k = a[-1]
+        with np.errstate(over="ignore", invalid="ignore"):
+            a = (a[:-1] + k * a[-2::-1]) / (1.0 - k * k)
+
+
+class Predictors:
+    """A Gaussian autoregression towards the past, one value at a time: from k newer values, up to p of them.
+
+    It gives the law of the Cholesky factor of the stationary covariance, and to rounding its values, in O(p²).
+    Source: Durbin (1960); reversed in time a Gaussian autoregression has the same predictors.
+    """
+
+    def __init__(self, phi: Sequence[float], sd: float):
+        self.orders = [np.zeros(0), *list(_orders(phi))[::-1]]
+        variances = [sd * sd]
+        for a in self.orders[:0:-1]:
+            variances.append(variances[-1] / (1.0 - a[-1] * a[-1]))
+        self.variances = np.array(variances[::-1])
+
+    def draw(self, z: Sequence[Array]) -> list[Array]:
+        """x[−1], x[−2], … from as many standard normals, at least p."""
+        p = len(self.orders) - 1
+        x = np.sqrt(self.variances[: len(z), None][:p]) * np.array(z[:p])
+        for k in range(p):  # what x[k] adds to all that lie further back, in one go
+            weights = np.array([self.orders[t][t - 1 - k] for t in range(k + 1, p)])
+            x[k + 1 :] += weights[:, None] * x[k]
+        out = list(x)
+        for more in z[p:]:
+            out.append(self.further(out, more))
+        return out
+
+    def further(self, x: list[Array], z: Array) -> Array:
+        """The next value further back of at least p."""
+        phi = self.orders[-1].tolist()
+        total = np.sqrt(self.variances[-1]) * z
+        for i, c in enumerate(phi, start=1):
+            if c:
+                total = total + c * x[-i]
+        return total
 
 
 def companion(phi: Sequence[float], theta: Sequence[float], depth_x: int, depth_a: int) -> tuple[Array, Array]:
@@ -147,15 +190,28 @@ class JointStart:
         n = len(core)
         return _solve_right(whole[:n, :n], whole[n:, :n]), whole[n:, n:]
 
+    @cached_property
+    def alone(self) -> dict[int, Predictors]:
+        """Long autoregressions that no earlier member moves: they start from predictors, with others or without."""
+        return {
+            i: Predictors(m.phi, m.sd)
+            for i, m in enumerate(self.members)
+            if len(m.phi) > DENSE and not m.q and not np.any(self.correlation[i, :i])
+        }
+
     def variance(self, index: int = 0) -> float:
         """The stationary variance of one member's values."""
         member = self.members[index]
+        if len(member.phi) > DENSE and not member.q:
+            return float(Predictors(member.phi, member.sd).variances[0])
         a, b = companion(member.phi, member.theta, member.p, member.q)
         s = stationary_cross(a, member.sd * member.sd * (b[:, None] * b[None, :]), a)
         return float(s[0, 0])
 
     def settle(self, z: Sequence[Array]) -> Array:
         """The one member's past values, newest first, from its scaled shocks and then its start normals."""
+        if self.alone:
+            return np.array(self.alone[0].draw(z))
         return np.array(weigh(self.factor, z)[self.members[0].q :])
 
     def draw(self, shocks, starts, head: int) -> list[tuple[Array, Array]]:
@@ -167,6 +223,9 @@ class JointStart:
             ``shocks[i](first, count)`` and ``starts[i](first, count)`` give standard normals
             (count, paths) at places first, first + 1, … counted backwards from step −1.
         """
+        if len(self.alone) == len(self.members) == 1:
+            x = np.array(self.alone[0].draw(starts[0](0, max(head, self.members[0].p))))
+            return [(x, np.zeros((0, x.shape[1])))]
         z = []
         for i, m in enumerate(self.members):
             z += [*shocks[i](0, m.q), *starts[i](0, m.p)]
@@ -176,6 +235,8 @@ class JointStart:
             shock_rows.append(core[place : place + m.q])
             xs.append(core[place + m.q : place + m.q + m.p])
             place += m.q + m.p
+        for i, predictors in self.alone.items():
+            xs[i] = predictors.draw(starts[i](0, self.members[i].p))
         self._extend(xs, shock_rows, shocks, starts, head)
         return [
             (np.array(x), np.array(a[: m.q]) if m.q else np.zeros((0, x[0].shape[0])))
@@ -194,7 +255,10 @@ class JointStart:
                 z += [*shocks[i](member.q + step, 1)] if member.q else []
             new = [w + n for w, n in zip(weigh(weights, m), weigh(factor, z), strict=True)]
             for i, member in enumerate(self.members):
-                xs[i].append(new.pop(0))
+                value = new.pop(0)
+                if i in self.alone:
+                    value = self.alone[i].further(xs[i], starts[i](member.p + step, 1)[0])
+                xs[i].append(value)
                 if member.q:
                     shock_rows[i].append(new.pop(0))
 

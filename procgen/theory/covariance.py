@@ -4,12 +4,15 @@ from __future__ import annotations
 
 import numpy as np
 
-from procgen.theory.arma import cross_covariance
+from procgen.theory.arma import CrossCovariance, cross_covariance
 from procgen.theory.linear import At, Base, Linear, Season, Sum, base_of
 from procgen.theory.processes import mixed
 from procgen.theory.sources import PROCESS, Space
 from procgen.theory.system import LARGEST_STATE, state_size, system_of
 from procgen.theory.weights import covariance_by_weights
+
+SPARSE = 256  # so many pairs of delays are multiplied one by one
+DIRECT = 10**8  # up to so many products a convolution is added up as such
 
 
 def covariance(space: Space, x: Linear, y: Linear, t: np.ndarray, s: np.ndarray) -> np.ndarray:
@@ -55,8 +58,8 @@ def _plain(space: Space, x: Linear, y: Linear, t: np.ndarray, s: np.ndarray) -> 
             if scale == 0.0:
                 continue
             gamma = cross_covariance(a.phi, b.phi)
-            for shift, weight in _shifts(delays_a, delays_b).items():
-                total += (scale * weight) * gamma(t - s + shift)
+            by, weights = _shifts(delays_a, delays_b)
+            total += _summed(gamma, t - s, by, scale * weights)
             for back, weight in frozen_b.items():
                 for delay, c in delays_a.items():
                     total += (scale * weight * c) * gamma(t - delay + back)
@@ -68,18 +71,40 @@ def _plain(space: Space, x: Linear, y: Linear, t: np.ndarray, s: np.ndarray) -> 
     return total
 
 
-def _shifts(a: dict[int, float], b: dict[int, float]) -> dict[int, float]:
-    """Weights of Gamma(h + shift) in the covariance of two sums of delays: a correlation of the coefficients."""
-    if len(a) == 1 and len(b) == 1:
-        ((d, c),), ((e, k),) = a.items(), b.items()
-        return {e - d: c * k}
+def _summed(gamma: CrossCovariance, gaps: np.ndarray, by: np.ndarray, weights: np.ndarray) -> np.ndarray:
+    """The sum over shifts `by` of their weights times Gamma(gap + shift)."""
+    if len(by) <= SPARSE:
+        total = np.zeros(gaps.shape)
+        for shift, weight in zip(by.tolist(), weights.tolist(), strict=True):
+            total += weight * gamma(gaps + shift)
+        return total
+    distinct, which = np.unique(gaps, return_inverse=True)
+    return np.array([weights @ gamma(gap + by) for gap in distinct])[which].reshape(gaps.shape)
+
+
+def _shifts(a: dict[int, float], b: dict[int, float]) -> tuple[np.ndarray, np.ndarray]:
+    """Shifts and weights of Gamma(h + shift) in the covariance of two sums of delays: a correlation of both."""
+    if len(a) * len(b) <= SPARSE:  # perhaps far apart: each with each
+        pairs: dict[int, float] = {}
+        for d, c in a.items():
+            for e, k in b.items():
+                pairs[e - d] = pairs.get(e - d, 0.0) + c * k
+        return np.array(list(pairs), np.int64), np.array(list(pairs.values()))
     low_a, low_b = min(a), min(b)
     first, second = np.zeros(max(a) - low_a + 1), np.zeros(max(b) - low_b + 1)
     first[np.array(list(a)) - low_a] = list(a.values())
     second[np.array(list(b)) - low_b] = list(b.values())
-    weights = np.convolve(second, first[::-1])  # index k is the shift k - (len(first) - 1) + low_b - low_a
-    offset = low_b - low_a - (len(first) - 1)
-    return {int(k) + offset: float(weights[k]) for k in np.nonzero(weights)[0]}
+    weights = _convolved(second, first[::-1])  # index k is the shift k - (len(first) - 1) + low_b - low_a
+    (at,) = np.nonzero(weights)
+    return at + (low_b - low_a - (len(first) - 1)), weights[at]
+
+
+def _convolved(a: np.ndarray, b: np.ndarray) -> np.ndarray:
+    if len(a) * len(b) <= DIRECT:
+        return np.convolve(a, b)
+    from scipy.signal import fftconvolve
+
+    return fftconvolve(a, b)
 
 
 def _by_base(form: Linear) -> dict[Base, tuple[dict[int, float], dict[int, float]]]:
