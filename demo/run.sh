@@ -37,7 +37,7 @@ sed -n '1,4p' "$out/verdict.txt"
 echo "... (all of it: $out/verdict.txt)"
 
 say "4. A spec with faults: procgen theory demo/fault.yaml"
-expect 2 $procgen theory demo/fault.yaml
+expect 2 $procgen theory demo/fault.yaml 2>&1
 
 say "5. A copy with one series changed: procgen validate $out/tampered"
 cp -R "$out/island" "$out/tampered"

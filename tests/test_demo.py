@@ -27,6 +27,17 @@ def test_a_copy_changed_in_place_is_refused_and_the_place_is_named(tmp_path):
     assert sizes[0] == sizes[1]
 
 
+def test_everything_that_the_demo_shows_is_on_standard_output():
+    """The faults of step 4 are messages of a command; here they are part of what is shown, in their place."""
+    lines = (ROOT / "demo" / "run.sh").read_text().splitlines()
+    shown = [line for line in lines if line.startswith("expect 2 ")]
+    assert len(shown) == 1
+    command = shown[0].removeprefix("expect 2 ").replace("$procgen", f"{sys.executable} -m procgen")
+    done = subprocess.run(["sh", "-c", command], cwd=ROOT, capture_output=True, text=True)
+    assert done.returncode == 2 and done.stderr == ""
+    assert done.stdout.startswith("procgen: 4 faults in this spec")
+
+
 def test_the_scripts_are_plain_sh():
     for script in ("demo/run.sh", "tests/run.sh", "tests/venv.sh"):
         subprocess.run(["sh", "-n", str(ROOT / script)], check=True)
