@@ -21,6 +21,7 @@ from typer.testing import CliRunner
 import procgen as pg
 from procgen.chance.laws import LAWS
 from procgen.cli import app
+from procgen.spec.calendar import Grid
 from procgen.spec.reader import read_text
 from procgen.terms import catalogue
 
@@ -95,6 +96,34 @@ def test_the_term_of_the_developers_page_is_one(monkeypatch):
     assert mean.tolist() == [5.0 if 12 <= step < 18 else 0.0 for step in range(40)]
     difference = pg.render(spec)["x"] - pg.render(read_text(text.replace("size: 5", "size: 0"), kinds, LAWS))["x"]
     assert difference == pytest.approx(np.tile(mean, (200, 1)))  # all other draws are as they were
+
+
+def test_what_the_reference_says_of_time_is_so():
+    page = (ROOT / "specs" / "README.md").read_text(encoding="utf-8")
+
+    def grid(start: str, every: str) -> Grid:
+        return pg.load(
+            {
+                "procgen": 1,
+                "seed": 1,
+                "paths": 1,
+                "time": {"start": start, "every": every, "steps": 3, "zone": "Europe/Berlin"},
+                "series": {"x": [{"constant": 1}]},
+            }
+        ).time
+
+    def stamps(start: str, every: str) -> list[str]:
+        return [str(np.datetime64(int(at), "us"))[:16] for at in grid(start, every).stamps(0, 3)]
+
+    # The clocks of Berlin: tz database; CEST is UTC+2, and from 31 October 2027, 03:00, CET is UTC+1.
+    assert stamps("2027-10-31T02:30", "1h")[0] == "2027-10-31T00:30"
+    assert stamps("2027-10-31T02:30+01:00", "1h")[0] == "2027-10-31T01:30"
+    assert stamps("2027-03-27T02:30", "1d") == ["2027-03-27T01:30", "2027-03-28T01:30", "2027-03-29T00:30"]
+    with pytest.raises(pg.SpecError, match="the clocks skip it"):
+        grid("2027-03-28T02:30", "1h")
+    assert grid("2027-01-04", "1 business day").steps_per("year") == pytest.approx(365.2425 * 5 / 7)
+    assert "260.887 steps" in page and f"{365.2425 * 5 / 7:.6f}".startswith("260.887")
+    assert "0.2/√252 = 0.0126" in page and f"{0.2 / 252**0.5:.4f}" == "0.0126"
 
 
 def test_links_lead_somewhere():

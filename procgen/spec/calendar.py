@@ -46,7 +46,8 @@ class Grid:
     Parameters
     ----------
     steps : number of steps.
-    start : local date and time at which step 0 begins, without a time zone; its `fold` says which of two.
+    start : local date and time at which step 0 begins, without a time zone; its `fold` says which of two, the
+        first where it is 0. Calendar steps at a clock time that a day skips are moved past the gap.
     every : length of a step as (count, unit), the unit a key of `units.LENGTH`.
     zone : name of the time zone; None is UTC.
     stamp : "begin" or "end": which end of a step its stamp is.

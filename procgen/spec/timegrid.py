@@ -82,7 +82,7 @@ class Dates(Domain):
 
 TIME = (
     Parameter("steps", "T", Whole(at_least=1, at_most=MOST), "number of steps"),
-    Parameter("start", "", Date(), "local date and time at which step 0 begins", default=None),
+    Parameter("start", "", Date(), "local date and time at which step 0 begins; of two, the first", default=None),
     Parameter("every", "", Every(), "length of a step", default=None),
     Parameter("zone", "", Zone(), "time zone of the start; UTC when absent", default=None),
     Parameter("stamp", "", Choice("begin", "end"), "which end of a step its time is", default="begin"),

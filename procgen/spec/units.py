@@ -14,7 +14,7 @@ DAY = 86_400 * SECOND
 YEAR = 31_556_952 * SECOND  # the Gregorian mean year of 365.2425 days
 
 # Mean length in microseconds. Months, quarters and years are Gregorian means; a business day is 7/5 of a day,
-# holidays not counted.
+# holidays not counted: a year has 365.2425·5/7 = 260.887… of them, and not the 252 that some markets count.
 LENGTH = {
     "ms": SECOND // 1000,
     "s": SECOND,

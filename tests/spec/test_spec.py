@@ -298,9 +298,11 @@ def test_times():
         ("{steps: 5, start: 2027-01-04}",
          "expected every beside start, as in {start: 2027-01-04, every: 15min, steps: 96}", "time:7"),
         ("{steps: 5, every: 1d, start: 4.1.2027}", "expected a date, with or without a time, such as 2027-01-04 or "
-         '2027-01-04T06:00, got "4.1.2027" (start: local date and time at which step 0 begins)', "time.start:36"),
+         '2027-01-04T06:00, got "4.1.2027" '
+         "(start: local date and time at which step 0 begins; of two, the first)", "time.start:36"),
         ("{steps: 5, every: 1d, start: 2027-02-30}", "expected a date, with or without a time, such as 2027-01-04 or "
-         '2027-01-04T06:00, got "2027-02-30" (start: local date and time at which step 0 begins)', "time.start:36"),
+         '2027-01-04T06:00, got "2027-02-30" '
+         "(start: local date and time at which step 0 begins; of two, the first)", "time.start:36"),
         ("{steps: 5, every: 1d, zone: UTC}", "zone means nothing without start; give start, or remove zone",
          "time.zone:29"),
         ("{steps: 5, stamp: end}", "stamp means nothing without start; give start, or remove stamp", "time.stamp:18"),
