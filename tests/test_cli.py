@@ -203,6 +203,18 @@ def test_digest_ends_with_0_when_values_are_as_recorded_and_1_when_not(rendered)
     assert "path 7, step 5" in bad.out
 
 
+def test_a_changed_manifest_is_named_by_digest_and_refused_by_validate(rendered):
+    path = rendered / "manifest.json"
+    path.write_text(path.read_text().replace('"stream_version": 1', '"stream_version": 9'))
+    found = Result("digest", str(rendered))
+    assert found.code == 1 and "identity.stream_version is 9, and 1 in the part" in found.out
+    assert "manifest.json was changed after it was written (identity.stream_version)" in refused(
+        Result("validate", str(rendered))
+    )
+    assert Result("render", PUMP, "-o", str(rendered), *SMALL, "--resume").code == 0
+    assert Result("digest", str(rendered)).code == 0
+
+
 # bad input
 
 
