@@ -103,6 +103,7 @@ class Table:
         if not len(frame):
             raise TableError(f"{where} has no rows")
         self._checks: list[Check] = []
+        self.absent = 0  # rows that are missing; they are NaN in every series
         path, labels = _codes(frame[names.path]) if names.path else (np.zeros(len(frame), np.int64), ["0"])
         self.labels: list[Any] = labels
         step = self._steps(frame, names, path)
@@ -113,6 +114,11 @@ class Table:
                 "is the right column named for the step?"
             )
         self.rows = self.paths * self.steps
+        if names.path is None and len(np.unique(step)) < len(step):
+            raise TableError(
+                f"{where}: steps repeat, and there is no column path; columns are {', '.join(map(str, names.found))}; "
+                'name it with --path-col NAME (columns={"path": NAME})'
+            )
         self._place(path, step)
         self._values = {name: self._numbers(frame[column], name) for name, column in names.series.items()}
 
@@ -231,7 +237,15 @@ class Table:
         if missing:
             gap = np.flatnonzero(self._key != np.arange(len(self._key)))
             first = self._where(int(gap[0]) if gap.size else len(self._key))
-            fault = "; ".join(filter(None, [fault, f"{missing} rows are missing, the first {first}"]))
+            begin = int((self._key % self.steps).min())
+            late = (
+                f": no path has a step before {begin}; if this is a window that starts at step {begin}, it cannot be "
+                f"compared as it is: give the steps from 0 on too (a spec states its values from step 0)"
+                if begin
+                else ""
+            )
+            fault = "; ".join(filter(None, [fault, f"{missing} rows are missing, the first {first}{late}"]))
+            self.absent = missing
         self._checks.append(Check.fact("", "every path and step once", "all rows", fault, "each is there once"))
 
     def _where(self, key: int) -> str:
@@ -240,6 +254,8 @@ class Table:
     def _numbers(self, column: pd.Series, name: str) -> NDArray:
         import pandas as pd
 
+        if column.dtype.kind == "c":
+            raise TableError(f"{self.where}: {name} holds complex numbers; expected real ones (give .real or .imag)")
         values = pd.to_numeric(column, errors="coerce").to_numpy(dtype=float, na_value=np.nan)
         text = np.isnan(values) & column.notna().to_numpy()
         if text.any():

@@ -82,7 +82,7 @@ class Gather:
         self.crossed = Powers(sum(len(pair.places) for pair in plan.cross))
         self.pooled = [Powers(1 + len(p.pool.lags)) if p.pool else None for p in plan.series]
         self.kept = Kept(len(plan.kept))
-        self.gaps: dict[str, float] = {}  # series without chance -> largest distance from theory
+        self.gaps: dict[str, tuple[float, float, float]] = {}  # series without chance -> largest gap, value, theory
         self.noise: dict[str, float] = {}  # series -> variance that rounding adds to a recovered shock
         self.routes = {name: way for name, way in plan.routes.items() if isinstance(way, Route)}
         scores = {name: way.scores for name, way in self.routes.items() if way.scores is not None}
@@ -171,8 +171,10 @@ class Gather:
         mean = plan.theory.mean(np.arange(step, step + len(x)))
         if mean is not None:
             with np.errstate(invalid="ignore"):
-                gap = np.nanmax(np.abs(x - mean[:, None]))
-            self.gaps[plan.name] = max(self.gaps.get(plan.name, 0.0), float(gap))
+                gap = np.nan_to_num(np.abs(x - mean[:, None]), nan=-1.0, posinf=np.inf)
+            row, path = np.unravel_index(int(np.argmax(gap)), gap.shape)
+            found = (float(gap[row, path]), float(x[row, path]), float(mean[row]))
+            self.gaps[plan.name] = max(self.gaps.get(plan.name, found), found)
 
     def _recover(self, lane: Lane, name: str, x: NDArray) -> NDArray:
         route = self.routes[name]
@@ -238,7 +240,7 @@ class Gather:
                 ours.merge(theirs)
         for largest, others in ((self.gaps, other.gaps), (self.noise, other.noise)):
             for name, value in others.items():
-                largest[name] = max(largest.get(name, 0.0), value)
+                largest[name] = max(largest.get(name, value), value)
         for name, shocks in self.shocks.items():
             shocks.merge(other.shocks[name])
         for name, errors in self.errors.items():

@@ -75,6 +75,19 @@ class Route:
             self.stopped = z.reason
         return np.full(x.shape, np.nan), None  # what could not be undone once is not taken up again
 
+    def needed(self, most: int) -> int | None:
+        """Steps until the first shock comes out of values that the spec itself draws; None beyond `most`."""
+        from procgen.terms.run import Run
+
+        run, carrier, step = Run(self.graph, 0, 1), self.start(1), 0
+        while step < most and carrier is not None:
+            z, carrier = self.tile(run.tile(256)[self.series], carrier, 0, step)
+            known = np.isfinite(z[:, 0])
+            if known.any():
+                return step + int(np.argmax(known)) + 1
+            step += 256
+        return None
+
     def _mean(self, first: int, steps: int) -> NDArray:
         key = (first, steps)
         if key not in self._means:

@@ -49,6 +49,11 @@ def origin(data: Any, spec: Any, columns: Mapping[str, str] | None) -> Origin:
             _need_spec(spec, path)
             return read_table(path, spec, columns)
     if hasattr(data, "blocks") and hasattr(data, "whole"):
+        if columns:
+            raise TableError(
+                f"an ensemble knows its own columns, so that none can be named for it, got {dict(columns)}; leave out "
+                "columns= (--path-col, --step-col, --time-col, --series-col)"
+            )
         return EnsembleOrigin(data, spec)
     if hasattr(data, "columns") and hasattr(data, "iloc"):
         from procgen.checks.foreign import from_frame
@@ -60,7 +65,7 @@ def origin(data: Any, spec: Any, columns: Mapping[str, str] | None) -> Origin:
 
 def _need_spec(spec: Any, what: object) -> None:
     if spec is None:
-        raise TableError(f"{what} does not say what it should follow; give the spec (--spec SPEC)")
+        raise TableError(f"{what} does not say what it should follow; give the spec (--spec SPEC, or spec=)")
 
 
 class EnsembleOrigin:

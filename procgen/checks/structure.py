@@ -33,7 +33,7 @@ class Structure:
     series: Sequence[Precision]
     not_finite: dict[str, list[int]] = field(default_factory=dict)  # series -> [count, path, step of the first]
     off_grid: dict[str, list[int]] = field(default_factory=dict)
-    narrow: dict[str, list[int]] = field(default_factory=dict)  # series -> [values that fit float32, values]
+    narrow: dict[str, list[int]] = field(default_factory=dict)  # series -> [values that fit float32, whole ones, all]
     prints: list[tuple[int, NDArray[np.uint64]]] = field(default_factory=list)  # (first path, (paths, series))
 
     def absorb(self, column: int, x: NDArray, first_path: int, first_step: int, prints: NDArray[np.uint64]) -> bool:
@@ -53,9 +53,10 @@ class Structure:
             sample = x[:, :_SAMPLE]
             with np.errstate(over="ignore", invalid="ignore"):
                 fits = int(np.count_nonzero(sample.astype(np.float32) == sample))
-            seen = self.narrow.setdefault(what.name, [0, 0])
-            seen[0] += fits
-            seen[1] += sample.size
+                whole = int(np.count_nonzero(np.rint(sample) == sample))
+            seen = self.narrow.setdefault(what.name, [0, 0, 0])
+            for k, count in enumerate((fits, whole, sample.size)):
+                seen[k] += count
         return finite
 
     def close(self, first_path: int, prints: NDArray[np.uint64]) -> None:
@@ -66,10 +67,8 @@ class Structure:
             for name, (count, path, step) in theirs.items():
                 old = mine.setdefault(name, [0, path, step])
                 mine[name] = [old[0] + count, *min((old[1], old[2]), (path, step))]
-        for name, (fits, seen) in other.narrow.items():
-            old = self.narrow.setdefault(name, [0, 0])
-            old[0] += fits
-            old[1] += seen
+        for name, counts in other.narrow.items():
+            self.narrow[name] = [a + b for a, b in zip(self.narrow.get(name, [0, 0, 0]), counts, strict=True)]
         self.prints += other.prints
 
     def checks(self, chance_of_equal: dict[str, float]) -> Iterator[Check]:
@@ -96,9 +95,11 @@ class Structure:
                 f"{count} value{'s have' if count > 1 else ' has'} more than the {what.decimals} decimals declared, "
                 f"the first at path {path}, step {step}"
             )
-        fits, seen = self.narrow.get(what.name, [0, 0])
+        fits, whole, seen = self.narrow.get(what.name, [0, 0, 0])
         if what.type == "float64" and seen >= 32 and fits > 0.9 * seen:
-            fault = "values went through float32 (all fit in it), where float64 is declared"
+            rounded = "values are rounded to whole numbers, where no rounding (`decimals: 0`) is declared"
+            narrowed = "values went through float32 (all fit in it), where float64 is declared"
+            fault = rounded if whole > 0.9 * seen else narrowed
         if what.type == "float32" and fits < seen:
             fault = "values are finer than float32, which is declared"
         return Check.fact(what.name, "precision", "all steps", fault, f"as declared: {declared}")

@@ -18,6 +18,8 @@ from procgen.checks.recover import Cannot, Expected, Route, expected, route
 from procgen.checks.structure import Precision
 from procgen.checks.verdict import Check, Verdict
 
+_LONGEST = 1 << 14  # steps over which the end of a forgotten start is looked for
+
 Tick = Callable[[int, int], None]
 Blocks = Iterable[tuple[int, int, Mapping[str, np.ndarray]]]
 
@@ -56,9 +58,16 @@ def validate(
     origin = source.origin(data, spec, columns)
     gather = gathered(plan_of(origin.spec, origin.steps), origin.blocks(), progress, origin.rows)
     rows = [*origin.checks(), *origin.faults, *judged(gather)]
+    absent = getattr(origin, "absent", 0)
+    if absent:  # rows that are missing are named once, not again as values that are not finite
+        rows = [row for row in rows if not _only_absent(row, gather, absent)]
     for row in rows:
         row.series = " ~ ".join(origin.columns.get(name, name) for name in row.series.split(" ~ "))
     return Verdict(rows, false_alarm, origin.about())
+
+
+def _only_absent(row: Check, gather: Gather, absent: int) -> bool:
+    return row.what == "finite values" and gather.structure.not_finite.get(row.series, [0])[0] == absent
 
 
 def gathered(plan: Plan, blocks: Blocks, progress: Tick | None = None, rows: int = 0) -> Gather:
@@ -153,14 +162,12 @@ def _known(gather: Gather, series: SeriesPlan) -> Check:
     """A series without chance must be its mean."""
     if series.unknown:
         return Check(series.name, "values", "all steps", "level", outcome="untestable", note=series.unknown)
-    gap = gather.gaps.get(series.name, 0.0)
+    gap, seen, stated = gather.gaps.get(series.name, (0.0, math.nan, math.nan))
     scale = float(np.max(np.abs(series.mean)))
     room = series.grain / 2 + 1e-9 * max(scale, 1e-300)
-    fault = (
-        "" if gap <= room else f"values are up to {gap:.4g} away from the known ones, without any chance in the spec"
-    )
+    fault = "" if gap <= room else f"a value is {seen:.10g}, stated {stated:.10g}, without any chance in the spec"
     check = Check.fact(series.name, "values", "all steps", fault, "every value is the known one")
-    check.kind, check.theory, check.estimate = "level", 0.0, gap
+    check.kind, check.theory, check.estimate = "level", stated, seen
     return check
 
 
@@ -182,7 +189,23 @@ def _shocks(gather: Gather, name: str) -> Iterator[Check]:
         note = f"stored rounding moves the shocks by {math.sqrt(noise):.2g} of their sd, too much for {sums.n} of them"
         yield Check(name, "recovered shocks", "all steps", "law", outcome="untestable", note=note)
         return
+    if sums.n == 0:
+        yield Check(name, "recovered shocks", "", "law", outcome="untestable", note=_none_recovered(way, gather))
+        return
     yield from shock_checks(name, sums, way.words)
+
+
+def _none_recovered(way: Route, gather: Gather) -> str:
+    """Why a way that can be gone has led to no shock, and how many steps would mend it."""
+    needed = way.needed(_LONGEST)
+    if needed is None:
+        return f"no shock could be recovered: {_LONGEST} steps would not be enough to forget what came before step 0"
+    if needed > gather.plan.steps:
+        return (
+            f"no shock could be recovered: what came before step 0 is not known and must be forgotten first, which "
+            f"needs about {needed} steps, not {gather.plan.steps}"
+        )
+    return "no shock could be recovered: no path has finite values throughout"
 
 
 def _chance_of_equal(series: SeriesPlan, plan: Plan) -> float:
@@ -191,11 +214,11 @@ def _chance_of_equal(series: SeriesPlan, plan: Plan) -> float:
         return 1.0
     if not np.isfinite(series.variance).all():
         return 0.0
-    moving = int(np.count_nonzero(series.variance > 0))
+    moving = int(np.count_nonzero(series.drawn > 0))
     if series.grain == 0.0:
         return 0.0 if moving else 1.0
     way = plan.routes[series.name]
-    sd = math.sqrt(float(series.variance.max()))
+    sd = math.sqrt(float(series.drawn.max()))
     if isinstance(way, Route) and way.kalman is not None:
         sd = min(sd, way.kalman.roots[-1])
         moving = plan.steps - 1 if moving < len(series.steps) else plan.steps

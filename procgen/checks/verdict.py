@@ -6,12 +6,14 @@ import math
 from collections import Counter
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import cached_property
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
+from procgen.checks.coverage import Coverage, coverage, title
 from procgen.checks.judge import Finding
 
 KINDS = ("structure", "level", "spread", "memory", "clustering", "law", "dependence")
@@ -99,11 +101,16 @@ class Verdict:
     Attributes
     ----------
     agrees : bool or None
-        True: no check departs. False: at least one does. None: nothing could be judged.
+        True: no check departs. False: at least one does. None: nothing could be judged, or nothing about the spread
+        of some series that has chance in it.
     checks : pandas.DataFrame
         One row a check, in the columns of `validate --json`, departures first.
     counts : dict
         Outcome -> number of checks.
+    coverage : list of Coverage
+        What of each series was judged, and what was not, with the reasons.
+    title : str
+        The verdict in one line, with what it does not cover.
     headline : list of str
         The departures in plain words, the largest disagreement first.
     false_alarm : float
@@ -122,12 +129,22 @@ class Verdict:
     def agrees(self) -> bool | None:
         if self.counts.get("departs"):
             return False
+        if any(each.blind for each in self.coverage):
+            return None
         return True if any(row.outcome == "agrees" and row.kind != "structure" for row in self.rows) else None
 
     @property
     def verdict(self) -> str:
         """ "agrees", "departs" or "untestable"."""
         return {True: "agrees", False: "departs", None: "untestable"}[self.agrees]
+
+    @cached_property
+    def coverage(self) -> list[Coverage]:
+        return coverage(self.rows, self.about)
+
+    @property
+    def title(self) -> str:
+        return title(self.verdict, self.coverage)
 
     @property
     def checks(self) -> Any:

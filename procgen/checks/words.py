@@ -43,6 +43,8 @@ def sentence(groups: list[list[Check]]) -> str:
     who = f"{top.series}: " if top.series else ""
     if top.kind == "structure":
         return f"{who}structure: {top.note}{_more(first)}"
+    if top.what == "values":
+        return f"{who}level: {top.note}"
     where = f" at {top.probe}" if top.probe else ""
     p = f", p {p_text(top.log_p)}" if top.log_p is not None else ""
     seen = f"{top.what}{where} is {number(top.estimate, 4)}, stated {number(top.theory, 4)}{p}"

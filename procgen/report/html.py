@@ -8,8 +8,9 @@ from html import escape
 from pathlib import Path
 from typing import TYPE_CHECKING
 
+from procgen.checks import coverage
 from procgen.checks.words import number, p_text
-from procgen.report.text import CAUTION
+from procgen.report.text import CAUTION, reported
 
 if TYPE_CHECKING:
     from procgen.checks.verdict import Check, Verdict
@@ -85,9 +86,11 @@ def verdict_page(verdict: Verdict) -> str:
             f"<style>{_STYLE}</style></head><body>",
             f"<header><h1>{title}</h1>",
             f'<p class="verdict {verdict.verdict}">{_TITLES[verdict.verdict]}</p>',
+            f'<p class="facts">{escape(verdict.title)}</p>',
             *_facts(verdict),
             "</header><main>",
             *_found(verdict),
+            *_covered(verdict),
             *_tables(verdict),
             f'</main><footer class="caution"><p>{escape(CAUTION)}</p></footer></body></html>',
             "",
@@ -100,6 +103,7 @@ def _facts(verdict: Verdict) -> Iterator[str]:
     counts = ", ".join(f"{count} {what}" for what, count in sorted(verdict.counts.items()))
     size = f"{about['paths']:,} paths × {about['steps']:,} steps. " if "paths" in about else ""
     yield f'<p class="facts">{escape(size)}{len(verdict.rows)} checks: {escape(counts)}.</p>'
+    yield from (f'<p class="facts">{escape(line)}.</p>' for line in reported(verdict))
     yield (
         '<p class="facts">Data of exactly the stated behaviour are called departing at most '
         f"{number(verdict.false_alarm)} of the time, over all checks together (Holm).</p>"
@@ -113,6 +117,14 @@ def _found(verdict: Verdict) -> Iterator[str]:
     lines = verdict.headline
     if lines:
         yield "<h2>What departs</h2><ul class='found'>"
+        yield from (f"<li>{escape(line)}</li>" for line in lines)
+        yield "</ul>"
+
+
+def _covered(verdict: Verdict) -> Iterator[str]:
+    lines = list(coverage.lines(verdict.coverage))
+    if lines:
+        yield "<h2>What was judged</h2><ul>"
         yield from (f"<li>{escape(line)}</li>" for line in lines)
         yield "</ul>"
 

@@ -7,6 +7,8 @@ from collections import Counter
 from collections.abc import Iterator, Sequence
 from typing import TYPE_CHECKING
 
+from procgen.checks import coverage
+from procgen.checks.judge import FEW_PATHS
 from procgen.checks.words import number, p_text
 
 if TYPE_CHECKING:
@@ -16,11 +18,6 @@ CAUTION = (
     "These are scenarios of a stated model, not forecasts and not advice. That paths behave as the model says does "
     "not make the model right; they do not replace the rules that bind you or the judgement of a licensed professional."
 )
-_SAYS = {
-    "agrees": "AGREES: nothing departs from what the spec states",
-    "departs": "DEPARTS from what the spec states",
-    "untestable": "CANNOT BE JUDGED: no check could be made",
-}
 _BAR = 12
 
 
@@ -37,20 +34,24 @@ def table(head: Sequence[str], rows: Sequence[Sequence[str]], left: Sequence[int
 
 def verdict_text(verdict: Verdict, rows: int = 8) -> str:
     """Verdict and counts, departures in words, the smallest p, what could have been seen, what was not judged."""
-    lines = [_SAYS[verdict.verdict]]
+    lines = [verdict.title]
     lines += [f"  {line}" for line in verdict.headline]
     lines += ["", *_counts(verdict)]
     judged = [row for row in verdict.rows if row.log_p is not None][:rows]
     if judged:
         lines += ["", "Smallest p (bar: −log₁₀ p; │ marks the level that one check alone must pass)"]
         lines += _worst(judged, verdict)
+    covered = list(coverage.lines(verdict.coverage))
+    if covered:
+        lines += ["", "What was judged:"]
+        lines += [f"  {line}" for line in covered]
     seen = list(_detectable(verdict.rows))
     if seen:
         lines += ["", "Smallest departures that would have been found 9 times in 10:"]
         lines += [f"  {line}" for line in seen]
     left = list(_not_judged(verdict.rows))
     if left:
-        lines += ["", "Not judged:"]
+        lines += ["", "Checks that were not judged:"]
         lines += [f"  {line}" for line in left]
     return "\n".join([*lines, "", *_wrapped(CAUTION)])
 
@@ -61,8 +62,19 @@ def _counts(verdict: Verdict) -> list[str]:
     size = f"{about['paths']:,} paths × {about['steps']:,} steps; " if "paths" in about else ""
     return [
         f"{size}{len(verdict.rows)} checks: {counts}",
+        *reported(verdict),
         f"a true ensemble is called departing at most {number(verdict.false_alarm)} of the time (Holm)",
     ]
+
+
+def reported(verdict: Verdict) -> list[str]:
+    """What the word `reported` in the tally stands for, where it stands there."""
+    notes = [row.note for row in verdict.rows if row.outcome == "reported"]
+    if not notes:
+        return []
+    few = any(" paths: reported" in note for note in notes)
+    why = f"fewer than {FEW_PATHS} paths are too few for these checks" if few else "the reasons stand below"
+    return [f"reported: shown, not judged; {why}"]
 
 
 def _worst(rows: Sequence[Check], verdict: Verdict) -> list[str]:

@@ -174,3 +174,52 @@ def test_simulator_mistakes_are_found_and_named(phi, sd, lag, scale, series, kin
         return
     assert verdict.agrees is False
     assert verdict.headline[0].startswith(tuple(f"{series}: {kind}" for kind in kinds))
+
+
+def test_a_missing_path_column_is_asked_for(frame):
+    with pytest.raises(TableError, match="no column path; columns are run, step, x, y; name it with --path-col"):
+        validate(frame.rename(columns={"path": "run"}), SPEC)
+
+
+def test_missing_rows_are_named_once_and_a_window_as_a_window(frame):
+    notes = [r.note for r in validate(frame.drop(index=[65]), SPEC).rows if r.outcome == "departs"]
+    assert notes == ["1 rows are missing, the first path 1, step 5"]
+    notes = [r.note for r in validate(frame[frame["step"] >= 20], SPEC).rows if r.kind == "structure"]
+    assert any("a window that starts at step 20" in note for note in notes)
+    assert not any("not finite" in note for note in notes)
+
+
+def test_complex_numbers_are_refused(frame):
+    with pytest.raises(TableError, match="x holds complex numbers"):
+        validate(frame.assign(x=frame["x"] + 1j), SPEC)
+
+
+def test_columns_of_an_ensemble_cannot_be_named(tmp_path):
+    from procgen.checks.source import origin
+
+    class Ours:
+        blocks = whole = None
+
+    with pytest.raises(TableError, match="--path-col"):
+        origin(Ours(), SPEC, {"path": "foo"})
+
+
+def test_a_series_without_chance_is_its_stated_values():
+    spec = read_spec({**RAW, "series": {"x": [{"constant": 5}]}})
+    path, step = np.divmod(np.arange(150 * 60), 60)
+    table = pd.DataFrame({"path": path, "step": step, "x": 5})
+    assert validate(table, spec).agrees is True
+    table.loc[70, "x"] = 7
+    assert validate(table, spec).headline == ["x: level: a value is 7, stated 5, without any chance in the spec"]
+
+
+def test_a_mean_alone_is_no_agreement():
+    garch = {"garch": {"sd": 2, "alpha": 0.15, "beta": 0.8}}
+    spec = read_spec({**RAW, "series": {"vol": [garch]}})
+    path, step = np.divmod(np.arange(200 * 50), 50)
+    table = pd.DataFrame({"path": path, "step": step})
+    table["vol"] = 2 * np.random.default_rng(1).standard_normal(len(table))  # level: false alarm 0.001
+    verdict = validate(table, spec)
+    assert verdict.agrees is None
+    assert verdict.title.startswith("CANNOT BE JUDGED: nothing about the spread of vol could be judged; only level")
+    assert "needs about 95 steps, not 50" in verdict.to_text()

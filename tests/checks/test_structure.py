@@ -67,3 +67,9 @@ def test_a_detour_through_float32():
     assert "float32" in looked_at(x.astype(np.float32).astype(float))["precision"].note
     assert looked_at(x.astype(np.float32).astype(float), kind="float32")["precision"].outcome == "agrees"
     assert "finer than float32" in looked_at(x, kind="float32")["precision"].note
+
+
+def test_whole_numbers_are_not_taken_for_float32():
+    note = looked_at(np.rint(100 * noise()))["precision"].note
+    assert "rounded to whole numbers" in note
+    assert "float32" not in note

@@ -69,9 +69,21 @@ def test_nothing_judged_is_no_agreement():
     assert Verdict([known], 0.001).agrees is True
 
 
+def test_no_agreement_without_a_look_at_the_spread():
+    level = [check(0.5, kind="level"), Check("x", "variance", "", "spread", outcome="untestable", note="no variance")]
+    assert Verdict(level, 0.001).agrees is None
+    assert "nothing about the spread of x" in Verdict(level, 0.001).title
+    part = Verdict([check(0.5, kind="level"), check(0.5, kind="spread")], 0.001)
+    assert part.agrees is True
+    assert part.title == (
+        "AGREES on level and spread only: memory, clustering, law and dependence of x could not be judged"
+    )
+    assert Verdict([check(0.5, kind="level"), check(9.0, kind="level")], 0.001).agrees is False
+
+
 def test_what_cannot_be_trusted_leaves_the_family():
     skewed = Check.of("x", "variance", "step 9", "spread", sample_mean(Sample(150, 0.0, 1.4, 2.8, 12.0), 1.0))
-    verdict = Verdict([skewed, check(2.0)], 0.001)
+    verdict = Verdict([skewed, check(2.0, kind="spread")], 0.001)
     assert skewed.outcome == "untestable"
     assert "too few" in skewed.note
     assert skewed.p is None

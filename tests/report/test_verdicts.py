@@ -28,7 +28,10 @@ def test_text_says_it_all():
 
 
 def test_text_of_the_other_outcomes():
-    assert verdict(z=(0.2,)).to_text().startswith("AGREES")
+    agrees = Verdict(verdict(z=(0.2,)).rows[:1], 0.001, ABOUT).to_text()
+    assert agrees.startswith("AGREES on spread only: level, memory, clustering, law and dependence of load")
+    assert "load: spread; not judged: level, memory" in agrees
+    assert verdict(z=(0.2,)).to_text().startswith("CANNOT BE JUDGED: nothing about the spread of x<script>")
     assert verdict(z=()).to_text().startswith("CANNOT BE JUDGED")
 
 
