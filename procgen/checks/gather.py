@@ -238,9 +238,10 @@ class Gather:
         for ours, theirs in zip(self.pooled, other.pooled, strict=True):
             if ours is not None and theirs is not None:
                 ours.merge(theirs)
-        for largest, others in ((self.gaps, other.gaps), (self.noise, other.noise)):
-            for name, value in others.items():
-                largest[name] = max(largest.get(name, value), value)
+        for name, gap in other.gaps.items():
+            self.gaps[name] = max(self.gaps.get(name, gap), gap)
+        for name, noise in other.noise.items():
+            self.noise[name] = max(self.noise.get(name, noise), noise)
         for name, shocks in self.shocks.items():
             shocks.merge(other.shocks[name])
         for name, errors in self.errors.items():
