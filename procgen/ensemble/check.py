@@ -79,6 +79,8 @@ class DigestResult:
     def text(self) -> str:
         """The result in a few lines."""
         lines = [str(damage) for damage in self.damages]
+        if any("other values" in damage.sentence for damage in self.damages) and not self.redrawn:
+            lines.append("to see where: --redraw names the first value that differs")
         if self.damages:
             lines.append("to mend: render again with --resume, which draws missing and damaged parts anew")
         if self.digest is not None:
@@ -226,7 +228,7 @@ class Reader:
                 if nodes[name][key] != theirs[key]:
                     area = digest.area(key, part.block, self.manifest.whole)
                     return [Damage(part.file, f"series {name} has other values in {area}", name, area)]
-        return [Damage(part.file, "it has other values than the manifest says; --redraw names the first")]
+        return [Damage(part.file, "it has other values than the manifest says")]
 
     def _identity(self, part: PartRecord) -> list[Damage]:
         """Whether a part says that it is of another ensemble; of a manifest that was changed, that is its fault."""
