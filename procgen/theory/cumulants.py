@@ -9,12 +9,14 @@ from __future__ import annotations
 
 import numpy as np
 
-from procgen.theory.covariance import covariance
+from procgen.theory.covariance import DIRECT, covariance
 from procgen.theory.garch import Garch
 from procgen.theory.linear import At, Base, Linear
 from procgen.theory.sources import Source, Space
 from procgen.theory.unknown import Unknown
 from procgen.theory.weights import Sided, over_distinct, weights_at
+
+SPARSE = 4096  # so many pairs of shocks are added up one by one
 
 
 def joint_cumulant(source: Source, forms: Sided, t: np.ndarray, s: np.ndarray) -> np.ndarray:
@@ -65,7 +67,10 @@ def _quadratic(p: np.ndarray, q: np.ndarray, covariances: np.ndarray) -> float:
     """Sum over u, v of p(u) q(v) c(|u - v|)."""
     from scipy.signal import correlate
 
-    by_lag = correlate(p, q)
+    (u,), (v,) = np.nonzero(p), np.nonzero(q)
+    if len(u) * len(v) <= SPARSE:  # few shocks, perhaps far apart
+        return float(p[u] @ covariances[np.abs(u[:, None] - v[None, :])] @ q[v])
+    by_lag = correlate(p, q, method="direct" if len(p) * len(q) <= DIRECT else "fft")
     middle = len(q) - 1
     return float(by_lag[middle:] @ covariances[: len(p)] + by_lag[middle - 1 :: -1] @ covariances[1 : len(q)])
 

@@ -135,7 +135,8 @@ class Known:
 
     def exp(self) -> Known:
         if self.value is not None:
-            return constant(float(np.exp(self.value)))
+            with np.errstate(over="ignore", under="ignore"):
+                return constant(float(np.exp(self.value)))
         return whole(("exp", self.key), lambda steps: np.exp(self.at(steps)), self.periods, "; ".join(self.notes))
 
     def lag(self, by: int) -> Known:

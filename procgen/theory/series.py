@@ -156,9 +156,13 @@ class SeriesTheory:
 
     def _try(self, name: str, answer: Callable[[], Any]) -> Any:
         try:
-            value = answer()
+            with np.errstate(over="ignore", invalid="ignore", under="ignore"):
+                value = answer()
         except Unknown as unknown:
             self._reasons[name] = unknown.reason
+            return None
+        except ArithmeticError:  # of plain numbers: arrays become infinite
+            self._reasons[name] = OVERFLOW
             return None
         if isinstance(value, np.ndarray | np.floating) and not np.isfinite(value).all():
             self._reasons[name] = OVERFLOW
@@ -181,6 +185,8 @@ class CrossTheory:
             self._reason = None if np.isfinite(value).all() else OVERFLOW
         except Unknown as unknown:
             self._reason = unknown.reason
+        except ArithmeticError:
+            self._reason = OVERFLOW
         return value if self._reason is None else None
 
     def correlation(self, t, s) -> np.ndarray | None:

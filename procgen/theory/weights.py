@@ -20,6 +20,7 @@ Sided = Sequence[tuple[Linear, int]]  # forms, each at the first (0) or the seco
 LEFT_OUT = 1e-13
 LONGEST = 1 << 20
 MOST_PAIRS = 4096
+FEW = 16
 
 
 def covariance_by_weights(space: Space, x: Linear, y: Linear, t: np.ndarray, s: np.ndarray) -> np.ndarray:
@@ -71,6 +72,11 @@ def _weights(form: Linear, step: int, top: int, count: int) -> np.ndarray:
             response = PowerSeries(np.ones(1), base_of(key).phi).upto(count + step + 1)
             total += c * _before_step_0(base_of(key), _kept_weights(key, response, step, top, count), top)
     for base, weights in delays.items():
+        if len(weights) <= FEW:  # delays that may lie far back are shifts of one response
+            response = PowerSeries(np.ones(1), base.phi).upto(count + 1)
+            for delay, c in weights.items():
+                total += c * _before_step_0(base, _shifted(response, step - delay - top, count), top)
+            continue
         numerator = np.zeros(max(weights) + 1)
         numerator[list(weights)] = list(weights.values())
         response = PowerSeries(numerator, base.phi).upto(count + 1)

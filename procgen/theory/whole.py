@@ -131,7 +131,10 @@ def _moments(axis: Axis, node: Any, memo: dict[int, Expression]) -> Any:
         inputs = [x for part in node.inputs if (x := _moments(axis, part, memo)) is not None]
         axis.at_work(node.name, node.term.values.get("period"))
         try:
-            memo[id(node)] = node.term.moments(axis, *inputs)
+            with np.errstate(over="ignore", invalid="ignore", under="ignore"):
+                memo[id(node)] = node.term.moments(axis, *inputs)
+        except ArithmeticError:  # of plain numbers: arrays become infinite
+            memo[id(node)] = opaque(axis.space, inputs, f"{node.name}: a number is too large for double precision")
         except (Unknown, NotImplementedError) as unknown:
             reason = str(unknown) or f"{node.term.kind} gives no closed moments"
             memo[id(node)] = opaque(axis.space, inputs, f"{node.name}: {reason}")
