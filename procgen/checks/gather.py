@@ -183,6 +183,7 @@ class Gather:
             lane.shocks[name] = ShockLane.start(lane.paths)
             if route.grain and route.kalman is None and name not in self.noise:
                 self.noise[name] = _rounding_noise(route, x[:, : min(64, lane.paths)], lane.first_path)
+                route.allow(self.noise[name])
         z, lane.carriers[name] = route.tile(x, lane.carriers[name], lane.first_path, lane.step)
         return self.shocks[name].absorb(z, lane.step, lane.shocks[name])
 

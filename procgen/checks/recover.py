@@ -20,6 +20,7 @@ SMALL_STATE = 64  # up to here it is preferred to undoing: it also knows how the
 COARSE = 0.5  # rounding beyond this share of the shock's standard deviation hides the shock
 SPAN = 50  # lags over which correlations between two series' shocks are followed
 _CACHED = 256
+_BEYOND = 10.0  # no rounding moves a shock by more than this many times its own standard deviation
 
 
 class Cannot(str):
@@ -74,6 +75,11 @@ class Route:
                 return z, carrier
             self.stopped = z.reason
         return np.full(x.shape, np.nan), None  # what could not be undone once is not taken up again
+
+    def allow(self, noise: float) -> None:
+        """Rounding adds the variance `noise` to a shock: so far it may carry one beyond the ends of its law."""
+        if self.scores is not None and noise < 1.0:
+            self.scores.room = max(self.scores.room, min(_BEYOND * noise**0.5, COARSE))
 
     def needed(self, most: int) -> int | None:
         """Steps until the first shock comes out of values that the spec itself draws; None beyond `most`."""

@@ -15,6 +15,8 @@ from numpy.typing import NDArray
 BINS = 4096
 _ORDER = 8  # Legendre components; two of them are spent on level and spread
 _REACH, _CELLS = 16.0, 1 << 16
+_FINE = 1e-6  # the error of the table that is let stand
+_ROOM = 1e-7  # how far beyond the ends of a bounded law a shock may lie by rounding in double precision
 
 
 class Scores:
@@ -24,32 +26,68 @@ class Scores:
     ----------
     law : Law
         As in the chance room: `gaussian`, `distribution()`.
+
+    Attributes
+    ----------
+    room : float
+        How far beyond the ends of a bounded law rounding may carry a shock.
     """
 
     def __init__(self, law: Any):
         self.law = law
         self.gaussian = bool(law.gaussian)
+        self.room = _ROOM
 
     @cached_property
     def distribution(self) -> Any:
         return self.law.distribution()
 
     def normal_scores(self, z: NDArray) -> NDArray:
-        """g for shocks z of any shape: by a fine table inside ±16 (error below 1e-7), exactly outside."""
+        """g for shocks z of any shape: by a fine table (error below 1e-6), exactly where the table is too coarse."""
         if self.gaussian:
             return z
+        z = self.folded(z)
         place = (z + _REACH) * (_CELLS / (2 * _REACH))
         cell = np.clip(place, 0, _CELLS - 1).astype(np.int64)
         part = place - cell
         g = self._table[cell] + part * (self._table[cell + 1] - self._table[cell])
-        far = (place < 0) | (place > _CELLS) | ~np.isfinite(g)
+        far = (place < 0) | (place > _CELLS) | ~np.isfinite(g) | self._rough[cell]
         if far.any():
             g[far] = self._exact(z[far])
         return g
 
+    def folded(self, z: NDArray) -> NDArray:
+        """Shocks that rounding carried over an end of the law, mirrored back.
+
+        A score just beyond an end is boundless, though nothing but rounding put the shock there. A density that is
+        level up to the end, blurred by symmetric rounding, is restored by the mirror.
+        """
+        low, high = self._ends
+        below, above = (z < low) & (z >= low - self.room), (z > high) & (z <= high + self.room)
+        if not below.any() and not above.any():
+            return z
+        return np.where(below, 2 * low - z, np.where(above, 2 * high - z, z))
+
+    @cached_property
+    def _ends(self) -> tuple[float, float]:
+        return float(self.distribution.ppf(0.0)), float(self.distribution.ppf(1.0))
+
     @cached_property
     def _table(self) -> NDArray:
         return self._exact(np.linspace(-_REACH, _REACH, _CELLS + 1))
+
+    @cached_property
+    def _rough(self) -> NDArray[np.bool_]:
+        """Cells in which a straight line is no match for g: where a density ends, g has no slope at all."""
+        width = 2 * _REACH / _CELLS
+        bend = np.abs(np.diff(self._table, 2, prepend=self._table[0], append=self._table[-1])) / 8
+        rough = ~(np.maximum(bend[:-1], bend[1:]) < _FINE)
+        rough[[0, -1]] = True
+        for end in self._ends:
+            if abs(end) < _REACH:
+                at = int((end + _REACH) / width)
+                rough[max(0, at - 1) : at + 2] = True
+        return rough
 
     def _exact(self, z: NDArray) -> NDArray:
         from scipy.special import ndtri
