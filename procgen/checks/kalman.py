@@ -85,8 +85,8 @@ class Kalman:
         while self.settled is None and len(self.gains) <= step:
             p = self._p
             pc = p @ self.c
+            known = float(self.c @ pc) <= 1e-14 * self._scale  # rounding alone is no shock
             f = float(self.c @ pc) + self.rounding
-            known = f <= 1e-14 * self._scale
             gain = np.zeros(len(self.c)) if known else self.a @ pc / f
             p = self.a @ p @ self.a.T + self.q - (0.0 if known else np.outer(gain, gain) * f)
             self._p = 0.5 * (p + p.T)
