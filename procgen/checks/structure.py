@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 from procgen.checks.verdict import Check
 
 _SAMPLE = 16  # paths of each tile whose bits are looked at for a detour through float32
+_SPACING = {"float32": 2.0**-24 + 4e-16}  # how far, of its size, a stored decimal number may lie from itself
 _CERTAIN = 1e-12  # expected number of equal pairs below which one equal pair is no chance
 
 
@@ -46,7 +47,7 @@ class Structure:
         if what.decimals is not None and abs(what.decimals) <= 15:
             scaled = x * 10.0**what.decimals
             with np.errstate(invalid="ignore"):
-                off = np.abs(scaled - np.rint(scaled)) > 1e-9 + 4e-16 * np.abs(scaled)
+                off = np.abs(scaled - np.rint(scaled)) > 1e-9 + _SPACING.get(what.type, 4e-16) * np.abs(scaled)
             if off.any():
                 _note(self.off_grid, what.name, off, first_path, first_step)
         elif what.type != "int64" and what.random and not what.discrete:
