@@ -15,6 +15,7 @@ from procgen.checks.sums import Powers
 from procgen.checks.verdict import Check
 
 _QUANTILES = (0.01, 0.99)
+_MOVED = 25  # values, at least, that coarse rounding must move by a cell before their mean can be judged
 
 
 def moment_checks(gather: Gather, column: int) -> Iterator[Check]:
@@ -64,24 +65,23 @@ def _mean_and_variance(gather: Gather, column: int, i: int) -> Iterator[Check]:
         reason = plan.theory.reason("variance") or "its variance is infinite: no central limit theorem holds"
         yield Check(plan.name, "mean", _at(plan, i), "level", outcome="untestable", note=reason)
         return
-    if plan.gaussian:
-        stored = sigma2 + plan.grain**2 / 12
-        if plan.grain > 2 * math.sqrt(sigma2):
-            note = f"rounding to {plan.grain:g} hides a standard deviation of {math.sqrt(sigma2):.3g}"
-            yield Check(plan.name, "variance", _at(plan, i), "spread", outcome="untestable", note=note)
-            return
+    if plan.coarse[i] and (i not in plan.rounded or n * sigma2 < _MOVED * plan.grain**2):
+        note = plan.too_coarse(math.sqrt(plan.drawn[i]))
+        for what, kind in (("mean", "level"), ("variance", "spread")):
+            yield Check(plan.name, what, _at(plan, i), kind, outcome="untestable", note=note)
+        return
+    if plan.gaussian and not plan.coarse[i]:
         if n >= 1:
-            mean = judge.normal_mean(mu + float(moments.mean[k]), mu, math.sqrt(stored), n)
+            mean = judge.normal_mean(mu + float(moments.mean[k]), mu, math.sqrt(sigma2), n)
             yield Check.of(plan.name, "mean", _at(plan, i), "level", mean)
         if n >= 2:
-            yield Check.of(
-                plan.name, "variance", _at(plan, i), "spread", judge.variance(moments.covariance(k, k), stored, n - 1)
-            )
+            variance = judge.variance(moments.covariance(k, k), sigma2, n - 1)
+            yield Check.of(plan.name, "variance", _at(plan, i), "spread", variance)
         return
     sample = _sample(gather.deviations, k)
     yield _limit(plan, "mean", _at(plan, i), "level", sample, mu, 1, math.sqrt(sigma2))
     product = gather.plan.products.index((column, i, i))
-    sd = plan.product_sd.get((i, i))
+    sd = None if plan.coarse[i] else plan.product_sd.get((i, i))
     yield _limit(plan, "variance", _at(plan, i), "spread", _sample(gather.products, product), sigma2, 2, sd)
 
 
@@ -117,12 +117,15 @@ def _covariances(gather: Gather, column: int) -> Iterator[Check]:
             continue
         probe = f"steps {plan.steps[i]}, {plan.steps[j]}"
         known = plan.covariance[i, j]
-        if known is None or not math.isfinite(known):
+        if plan.coarse[i] or plan.coarse[j]:
+            note = plan.too_coarse(math.sqrt(min(plan.drawn[i], plan.drawn[j])))
+            yield Check(plan.name, "covariance", probe, "memory", outcome="untestable", note=note)
+        elif known is None or not math.isfinite(known):
             yield Check(plan.name, "covariance", probe, "memory", outcome="untestable", note=plan.reason("covariance"))
         elif plan.gaussian:
-            if moments.n >= 2 and plan.grain <= 2 * math.sqrt(min(plan.variance[i], plan.variance[j])):
+            if moments.n >= 2:
                 a, b = gather.plan.offset[column] + i, gather.plan.offset[column] + j
-                s1, s2 = (math.sqrt(plan.variance[q] + plan.grain**2 / 12) for q in (i, j))
+                s1, s2 = math.sqrt(plan.variance[i]), math.sqrt(plan.variance[j])
                 finding = judge.covariance(moments.covariance(a, b), s1, s2, known / (s1 * s2), moments.n - 1)
                 yield Check.of(plan.name, "covariance", probe, "memory", finding)
         else:
@@ -138,7 +141,7 @@ def _covariances(gather: Gather, column: int) -> Iterator[Check]:
 def _growth(gather: Gather, column: int) -> Iterator[Check]:
     """How far a series that is not stationary moves from its first moving probe to its last."""
     plan, moments = gather.plan.series[column], gather.moments
-    moving = np.flatnonzero(~plan.constant)
+    moving = np.flatnonzero(~plan.constant & ~plan.coarse)
     if not plan.gaussian or moments.n < 2 or len(moving) < 2 or plan.theory.stationarity.covariance_stationary:
         return
     i, j = int(moving[0]), int(moving[-1])
@@ -149,7 +152,7 @@ def _growth(gather: Gather, column: int) -> Iterator[Check]:
     a, b = gather.plan.offset[column] + i, gather.plan.offset[column] + j
     seen = moments.covariance(a, a) + moments.covariance(b, b) - 2 * moments.covariance(a, b)
     if stated > max(plan.grain, 1e-9 * math.sqrt(float(plan.variance[j]))) ** 2:
-        finding = judge.variance(seen, stated + plan.grain**2 / 6, moments.n - 1)
+        finding = judge.variance(seen, stated, moments.n - 1)
         yield Check.of(
             plan.name, "variance of the change", f"steps {plan.steps[i]} to {plan.steps[j]}", "spread", finding
         )
@@ -166,6 +169,8 @@ def _laws(gather: Gather, column: int) -> Iterator[Check]:
         z = (values[:, k] - law.mean) / law.sd
         if plan.grain > 0.02 * law.sd / math.sqrt(len(values)):
             z = z + plan.grain / law.sd * (np.random.default_rng(i).random(len(z)) - 0.5)
+            plan.scores[i].room = plan.grain / law.sd
+            z = plan.scores[i].folded(z)
         if plan.grain > 0.5 * law.sd / len(values) ** 0.25:
             note = f"values are rounded to {plan.grain:g}, too coarse for the law"
             yield Check(plan.name, "law", _at(plan, i), "law", outcome="untestable", note=note)
@@ -186,7 +191,10 @@ def _pooled(gather: Gather, column: int) -> Iterator[Check]:
     pool = plan.pool
     if powers is None or pool is None:
         return
-    for k, lag in enumerate((-1, *pool.lags)):
+    if pool.coarse:
+        probe = f"steps {pool.first}–{pool.last - 1}"
+        yield Check(plan.name, "averages over steps", probe, "memory", outcome="untestable", note=pool.coarse)
+    for k, lag in enumerate(() if pool.coarse else (-1, *pool.lags)):
         sample = _sample(powers, k)
         if sample.n:
             yield _pooled_one(plan, pool, k, lag, sample)
@@ -243,6 +251,10 @@ def cross_moments(gather: Gather, place: int) -> Iterator[Check]:
         if a.constant[i] or b.constant[j]:
             continue
         probe = f"steps {a.steps[i]}, {b.steps[j]}"
+        hidden = [plan.too_coarse(math.sqrt(plan.drawn[q])) for plan, q in ((a, i), (b, j)) if plan.coarse[q]]
+        if hidden:
+            yield Check(name, "covariance between series", probe, "dependence", outcome="untestable", note=hidden[0])
+            continue
         yield from _cross_one(gather, pair, a, b, i, j, stated[k], start + k, name, probe)
 
 
@@ -262,7 +274,7 @@ def _cross_one(
     if not math.isfinite(known):
         return
     if pair.gaussian:
-        s1, s2 = math.sqrt(a.variance[i] + a.grain**2 / 12), math.sqrt(b.variance[j] + b.grain**2 / 12)
+        s1, s2 = math.sqrt(a.variance[i]), math.sqrt(b.variance[j])
         if moments.n >= 2 and math.isfinite(s1 * s2):
             p, q = gather.plan.offset[pair.first] + i, gather.plan.offset[pair.second] + j
             finding: Finding = judge.covariance(moments.covariance(p, q), s1, s2, known / (s1 * s2), moments.n - 1)

@@ -12,6 +12,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.checks import rounding
 from procgen.checks.scores import Scores
 
 GAUSSIAN_WINDOW = 96  # steps of a pooled statistic with an exact law (its cost grows with the cube)
@@ -39,7 +40,8 @@ def probe_pairs(steps: Sequence[int]) -> tuple[tuple[int, int], ...]:
 class SeriesPlan:
     """One series: its probes, their theory, the window of pooled statistics, and the marginal laws.
 
-    `mean` and `variance` are NaN where theory does not know them; `unknown` then says why.
+    `mean` and `variance` are those of the values as stored, rounding included. They are NaN where theory does not
+    know them; `unknown` then says why.
     """
 
     name: str
@@ -57,6 +59,11 @@ class SeriesPlan:
     product_sd: dict[tuple[int, int], float | None] = field(default_factory=dict)  # of deviations, not Gaussian
     pool: Pool | None = None
     period: int | None = None
+    rounded: dict[int, tuple[float, float]] = field(default_factory=dict)  # exact mean and variance, where computed
+
+    def __post_init__(self) -> None:
+        self.drawn = self.variance  # before rounding
+        self.coarse = np.zeros(len(self.steps), dtype=bool)  # probes hidden by rounding
 
     def reason(self, name: str) -> str:
         return self.theory.reason(name) or "theory has no closed form"
@@ -64,7 +71,10 @@ class SeriesPlan:
     @property
     def constant(self) -> NDArray[np.bool_]:
         """Probes at which theory leaves nothing to chance."""
-        return self.variance <= 0.0
+        return self.drawn <= 0.0
+
+    def too_coarse(self, sd: float) -> str:
+        return f"rounded to {self.grain:g}, too coarse against a standard deviation of {sd:.3g}"
 
 
 @dataclass
@@ -83,6 +93,7 @@ class Pool:
     exact: NDArray | None = None  # (1 + lags, window): eigenvalues of each average, where its law is exact
     slope: NDArray | None = None  # (lags, window): of x(t) on x(t - lag), where there is no exact law
     square_sd: float | None = None  # standard deviation of a path's average square, where it is known
+    coarse: str = ""  # why rounding leaves the averages without a theory
 
 
 class Marginal:
@@ -137,8 +148,30 @@ def plan_series(name: str, theory: Any, steps: int, grain: float, periods: Seque
             plan.product_sd = {
                 (i, j): _product_sd(plan, i, j) for i, j in [*((i, i) for i in range(len(at))), *plan.pairs]
             }
+        plan.coarse = _rounded(plan)
         plan.pool = _pool(plan, steps)
+        _as_stored(plan)
     return plan
+
+
+def _rounded(plan: SeriesPlan) -> NDArray[np.bool_]:
+    """Exact moments of the rounded value at the probes that need them; where rounding is coarse."""
+    for i in np.flatnonzero(np.isfinite(plan.drawn) & (plan.drawn > 0)):
+        share = plan.grain / np.sqrt(plan.drawn[i])
+        if share > (rounding.GAUSSIAN_COARSE if plan.gaussian else rounding.FINE):
+            law = plan.theory.marginal(int(plan.steps[i]))
+            exact = None if law is None else rounding.rounded_moments(law, plan.grain)
+            if exact is not None:
+                plan.rounded[int(i)] = exact
+    return rounding.coarse(plan.grain, plan.mean, plan.drawn, plan.gaussian, plan.rounded)
+
+
+def _as_stored(plan: SeriesPlan) -> None:
+    """Mean and variance of the rounded values."""
+    plan.mean = plan.mean.copy()
+    plan.variance = np.where(plan.drawn > 0, plan.drawn + _rounding(plan.grain), plan.drawn)
+    for i, (mean, variance) in plan.rounded.items():
+        plan.mean[i], plan.variance[i] = mean, variance
 
 
 def _marginals(plan: SeriesPlan) -> None:
@@ -182,8 +215,10 @@ def _pool(plan: SeriesPlan, steps: int) -> Pool | None:
         rows[k, lag:] = values
     if not np.isfinite(rows[0]).all() or not rows[0].max() > 0:
         return None
+    sds = np.sqrt(rows[0][rows[0] > 0])
     rows[0] += _rounding(plan.grain)
     pool = Pool(first, steps, tuple(lags), mean, rows)
+    pool.coarse = _coarse_window(plan, first, float(sds.min()))
     pool.exact = _eigenvalues(plan, window, tuple(lags)) if plan.gaussian else None
     if pool.exact is None:
         pool.slope = np.zeros(rows.shape)
@@ -192,6 +227,13 @@ def _pool(plan: SeriesPlan, steps: int) -> Pool | None:
             np.divide(row[lag:], earlier, out=slope[lag:], where=earlier > 0)
         pool.square_sd = _square_sd(plan, first, width)
     return pool
+
+
+def _coarse_window(plan: SeriesPlan, first: int, smallest: float) -> str:
+    """Why rounding hides the averages over a window from `first` on, or nothing."""
+    inside = plan.coarse & (plan.steps >= first)
+    hidden = plan.gaussian and plan.grain > rounding.GAUSSIAN_COARSE * smallest
+    return plan.too_coarse(smallest) if hidden or inside.any() else ""
 
 
 def _square_sd(plan: SeriesPlan, first: int, width: int) -> float | None:
