@@ -54,7 +54,11 @@ def test_its_paths_agree_with_its_theory(file):
     spec = spec.changed(steps=min(spec.time.steps, 128))
     ensemble = pg.render(spec)
     verdict = pg.validate(ensemble, false_alarm=FALSE_ALARM)
-    assert verdict.agrees is True, verdict.to_text()
+    # 200 paths are too few to judge the spread of some heavy-tailed series: then the verdict must say so of them.
+    assert "departs" not in verdict.counts and verdict.counts["agrees"] > 0, verdict.to_text()
+    blind = [each for each in verdict.coverage if each.blind]
+    assert verdict.agrees is (None if blind else True), verdict.to_text()
+    assert all(len(each.missing["spread"]) > 20 for each in blind)
     assert [len(set(verdict.checks["series"])) > 0, ensemble.names] == [True, tuple(spec.series)]
 
 
