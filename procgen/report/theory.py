@@ -7,11 +7,14 @@ from collections.abc import Iterable, Sequence
 from textwrap import wrap
 from typing import Any
 
+import numpy as np
+
 from procgen.report.equations import equations
 from procgen.spec.model import Spec
 from procgen.theory import SeriesTheory, Theory
 
 WIDTH = 100
+DUST = 1e-13  # of the variance
 MEMORY = ("autocovariance", "autocorrelation")
 WANTED = ("mean", "variance", "autocovariance")  # reasons of others are told for stationary series only
 
@@ -40,12 +43,16 @@ def some(count: int) -> list[int]:
 def head(spec: Spec) -> str:
     """Title, size, seed and time in two lines."""
     grid = spec.time
-    size = f"{spec.paths:,} paths × {grid.steps:,} steps"
+    size = f"{_many(spec.paths, 'path')} × {_many(grid.steps, 'step')}"
     if grid.every:
         size += f" of {grid.every[0]} {grid.every[1]}"
     if grid.start:
         size += f" from {grid.start:%Y-%m-%d %H:%M} ({grid.zone or 'UTC'})"
     return "\n".join([*([spec.title] if spec.title else []), f"{size}, seed {spec.seed}"])
+
+
+def _many(count: int, what: str) -> str:
+    return f"{count:,} {what}{'' if count == 1 else 's'}"
 
 
 def _series(theory: SeriesTheory, facts: dict[str, Any], unit: str | None) -> list[str]:
@@ -67,8 +74,14 @@ def _memory(theory: SeriesTheory, steps: Sequence[int], lags: Sequence[int]) -> 
     """Autocovariances from step 0, or from the middle of the steps shown where they change with the step."""
     start = 0 if theory.stationarity.covariance_stationary else steps[len(steps) // 2]
     found = (theory.autocovariance(lags, start), theory.autocorrelation(lags, start))
-    rows = [(name, None if v is None else v.tolist()) for name, v in zip(MEMORY, found, strict=True)]
+    rows = [(name, None if v is None else _without_dust(v)) for name, v in zip(MEMORY, found, strict=True)]
     return _table("lag" if start == 0 else f"lag, from step {start}", lags, rows)
+
+
+def _without_dust(values: np.ndarray) -> list[float]:
+    """Numbers with what is left of cancelled digits shown as 0."""
+    size = np.abs(values).max(initial=0.0)
+    return np.where(np.abs(values) < DUST * size, 0.0, values).tolist()
 
 
 def _unknown(facts: dict[str, Any]) -> list[str]:

@@ -215,4 +215,6 @@ def number(x: float) -> str:
 def signed(x: float, what: str) -> str:
     """`+ 0.5 x` or `− 0.5 x`, for the next summand of an equation."""
     size = "" if abs(x) == 1 and what else number(abs(x))
+    if size == "1" and abs(x) != 1:
+        size = repr(float(abs(x)))  # a root near 1 is not a unit root
     return f"{'−' if x < 0 else '+'} {size}{' ' if size and what else ''}{what}"

@@ -88,7 +88,8 @@ class Trend(Known):
         x = self.level + self.slope * t + self.quadratic * (t * t)
         slope = self.slope
         for bend in self.bends:
-            x = x + (bend["slope"] - slope) * np.maximum(t - bend["at"], 0.0)
+            at_0 = max(-bend["at"], 0.0)  # the level is the value at step 0, whatever was bent before
+            x = x + (bend["slope"] - slope) * (np.maximum(t - bend["at"], 0.0) - at_0)
             slope = bend["slope"]
         return x
 
@@ -98,7 +99,8 @@ class Trend(Known):
             text += f" {signed(self.quadratic, 't²')}"
         slope = self.slope
         for bend in self.bends:
-            ramp = f"max(0, t − {number(bend['at'])})"
+            at = bend["at"]
+            ramp = f"max(0, t − {number(at)})" if at >= 0 else f"(max(0, t + {number(-at)}) − {number(-at)})"
             text += f" {signed(bend['slope'] - slope, ramp)}"
             slope = bend["slope"]
         return text

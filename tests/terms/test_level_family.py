@@ -227,3 +227,16 @@ def test_what_cannot_be_is_refused_with_the_mend(term, sentence):
     with pytest.raises(SpecError) as caught:
         graph_of(f"  x: {term}")
     assert sentence in str(caught.value)
+
+
+def test_a_trend_has_its_level_at_step_0_whatever_was_bent_before():
+    body = "  x: {trend: {level: 5, slope: 1, bends: [{at: -10, slope: 3}, {at: 4, slope: 0}]}}"
+    x = draw(graph_of(body), 0, 1, [8])["x"][:, 0]
+    assert x.tolist() == [5, 8, 11, 14, 17, 17, 17, 17]
+    trend = graph_of(body).series["x"].term
+    assert trend.equation() == "x[t] = 5 + 1 t + 2 (max(0, t + 10) − 10) − 3 max(0, t − 4)".replace("+ 1 t", "+ t")
+
+
+def test_a_number_near_1_does_not_read_1():
+    term = graph_of("  x: {ar: {phi: 0.9999999999, sd: 1}}").series["x"].term
+    assert "0.9999999999 x[t−1]" in term.equation()
