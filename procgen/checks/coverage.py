@@ -40,6 +40,13 @@ class Coverage:
         return not self.still and "spread" in self.missing and "." not in self.series
 
 
+def blind(found: Sequence[Coverage]) -> bool:
+    """Whether the spread of some series may be anything, and that of no other was judged."""
+    unseen = [each for each in found if each.blind]
+    seen = [each for each in found if "spread" in each.judged and " ~ " not in each.series]
+    return bool(unseen) and not seen
+
+
 def coverage(rows: Sequence[Check], about: Mapping[str, Any]) -> list[Coverage]:
     """Of every series and pair with checks of its behaviour, in the order of their names' first rows."""
     groups: dict[str, list[Check]] = {}

@@ -13,7 +13,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from procgen.checks.coverage import Coverage, coverage, title
+from procgen.checks.coverage import Coverage, blind, coverage, title
 from procgen.checks.judge import Finding
 
 KINDS = ("structure", "level", "spread", "memory", "clustering", "law", "dependence")
@@ -129,7 +129,7 @@ class Verdict:
     def agrees(self) -> bool | None:
         if self.counts.get("departs"):
             return False
-        if any(each.blind for each in self.coverage):
+        if blind(self.coverage):
             return None
         return True if any(row.outcome == "agrees" and row.kind != "structure" for row in self.rows) else None
 

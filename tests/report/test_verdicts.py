@@ -31,7 +31,11 @@ def test_text_of_the_other_outcomes():
     agrees = Verdict(verdict(z=(0.2,)).rows[:1], 0.001, ABOUT).to_text()
     assert agrees.startswith("AGREES on spread only: level, memory, clustering, law and dependence of load")
     assert "load: spread; not judged: level, memory" in agrees
-    assert verdict(z=(0.2,)).to_text().startswith("CANNOT BE JUDGED: nothing about the spread of x<script>")
+    both = verdict(z=(0.2,))
+    assert both.agrees is True and both.title.startswith("AGREES on a part only") and "x<script>" in both.title
+    alone = Verdict([row for row in both.rows if row.series == "x<script>"], 0.001, ABOUT)
+    assert alone.agrees is None
+    assert alone.to_text().startswith("CANNOT BE JUDGED: no check of the behaviour could be made")
     assert verdict(z=()).to_text().startswith("CANNOT BE JUDGED")
 
 
