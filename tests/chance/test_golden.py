@@ -4,10 +4,11 @@ import json
 import os
 import subprocess
 import sys
+from importlib import import_module
 from pathlib import Path
 
+import numpy as np
 import pytest
-from numpy._core import _multiarray_umath as numpy_build
 
 from procgen.chance.kernel import available
 from tests.chance.golden import FILE, digests
@@ -24,6 +25,8 @@ def test_digests():
 
 def dispatched():
     """The features above NumPy's baseline that it uses on this processor."""
+    core = "numpy._core" if int(np.__version__.split(".")[0]) >= 2 else "numpy.core"
+    numpy_build = import_module(f"{core}._multiarray_umath")
     return [name for name in numpy_build.__cpu_dispatch__ if numpy_build.__cpu_features__.get(name)]
 
 
