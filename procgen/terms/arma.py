@@ -8,7 +8,7 @@ import numpy as np
 
 from procgen.chance.kernel import kernel
 from procgen.spec.declare import Parameter, Reals, Record
-from procgen.terms.base import LAW, SD, TOTAL_SD, Ahead, Term, Unknown, number, rows, signed, without_gap
+from procgen.terms.base import LAW, SD, TOTAL_SD, Ahead, Term, Unknown, number, rows, signed, stated, without_gap
 from procgen.terms.start import JointStart, Member, companion, decay_length, partial_autocorrelations
 
 FORGOTTEN = 1e-9
@@ -206,7 +206,10 @@ class Arma(Term):
     def equation(self, *inputs):
         parts = [signed(c, f"x[t−{i}]") for i, c in enumerate(self.phi, start=1)]
         parts += ["+ a[t]"] + [signed(c, f"a[t−{j}]") for j, c in enumerate(self.theta, start=1)]
-        return "x[t] = " + " ".join(parts).removeprefix("+ ")
+        given = self.before or {"x": (), "shocks": ()}
+        past = [stated("x", given["x"][-len(self.phi) :] if self.phi else ())]
+        past += [stated("a", given["shocks"][-len(self.theta) :] if self.theta else ())]
+        return ",  ".join(["x[t] = " + " ".join(parts).removeprefix("+ "), *filter(None, past)])
 
 
 class Ar(Arma):

@@ -218,3 +218,8 @@ def signed(x: float, what: str) -> str:
     if size == "1" and abs(x) != 1:
         size = repr(float(abs(x)))  # a root near 1 is not a unit root
     return f"{'−' if x < 0 else '+'} {size}{' ' if size and what else ''}{what}"
+
+
+def stated(name: str, past: Sequence[float]) -> str:
+    """`x[−2] = 4, x[−1] = 5` for a stated past, oldest first; for the end of an equation."""
+    return ", ".join(f"{name}[−{len(past) - i}] = {number(value)}" for i, value in enumerate(past))

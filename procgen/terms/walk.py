@@ -6,7 +6,7 @@ import numpy as np
 
 from procgen.chance.kernel import kernel
 from procgen.spec.declare import Parameter, Real, Reals, Record
-from procgen.terms.base import LAW, SD, Ahead, Term, number, rows, signed
+from procgen.terms.base import LAW, SD, Ahead, Term, number, rows, signed, stated
 
 
 @kernel
@@ -90,4 +90,5 @@ class RandomWalk(Term):
 
     def equation(self, *inputs):
         drift = f" {signed(self.drift, '')}" if self.drift else ""
-        return f"x[t] = x[t−1]{drift} + a[t],  x[0] = {number(self.start)}"
+        start = f"x[0] = {number(self.start)}" if self.before is None else stated("x", self.before["x"][-1:])
+        return f"x[t] = x[t−1]{drift} + a[t],  {start}"

@@ -180,3 +180,13 @@ def test_what_cannot_be_drawn_is_refused_with_the_mend(term, sentence):
 def test_an_infinite_variance_is_run_on_purpose():
     graph = graph_of("  x: {garch: {omega: 1, alpha: 0.6, beta: 0.5, allow_infinite_variance: true}}")
     assert np.isfinite(draw(graph, 0, 4, [50])["x"]).all()
+
+
+def test_an_equation_says_from_which_past_it_leaves():
+    graph = graph_of(
+        "  a: {arma: {phi: [0.5, 0.2], theta: 0.3, sd: 1, before: {x: [3, 4, 5], shocks: [0.5]}}}\n"
+        "  w: {random_walk: {sd: 1, before: {x: [90, 100]}}}\n  s: {random_walk: {sd: 1, start: 7}}"
+    )
+    said = {name: graph.series[name].term.equation() for name in graph.series}
+    assert said["a"] == "x[t] = 0.5 x[t−1] + 0.2 x[t−2] + a[t] + 0.3 a[t−1],  x[−2] = 4, x[−1] = 5,  a[−1] = 0.5"
+    assert said["w"] == "x[t] = x[t−1] + a[t],  x[−1] = 100" and said["s"].endswith("x[0] = 7")
