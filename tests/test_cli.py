@@ -155,7 +155,7 @@ def test_validate_ends_with_0_1_or_2(rendered, tmp_path):
     fixed = tmp_path / "fixed.yaml"
     fixed.write_text("procgen: 1\nseed: 1\npaths: 3\ntime: {steps: 4}\nseries:\n  x: [{white_noise: {sd: 1}}]\n")
     assert Result("render", str(fixed), "-o", str(tmp_path / "few")).code == 0
-    assert Result("validate", str(tmp_path / "few")).code in (0, 2)
+    assert Result("validate", str(tmp_path / "few")).code == 0  # few paths: their exact laws and shocks are judged
 
 
 def test_validate_reads_a_strangers_table_by_its_own_names(rendered, tmp_path):

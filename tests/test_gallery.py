@@ -62,7 +62,7 @@ def test_its_paths_agree_with_its_theory(file):
     for each in verdict.coverage:
         if each.blind:
             assert len(each.missing["spread"]) > 20 and each.series in verdict.title
-    assert [len(set(verdict.checks["series"])) > 0, ensemble.names] == [True, tuple(spec.series)]
+    assert set(spec.series) <= set(verdict.checks["series"])
 
 
 def test_there_are_a_dozen_scenarios_at_least():

@@ -92,18 +92,21 @@ CONTRARY = {  # what used to depart: entries, store, paths, steps
     "integral, decimals": ([{"integrate": [{"ar": {"phi": 0.5, "sd": 1}}]}], {"decimals": 2}, 1000, 100),
     "float32 and decimals": ([{"white_noise": {"sd": 1}}], {"type": "float32", "decimals": 2}, 100, 100),
     "claims": (
-        [{"exp": [{"constant": 0.7}, {"ar": {"phi": 0.7, "total_sd": 0.3}}]}], {"type": "int64"}, 1000, 100,
+        [{"exp": [{"constant": 0.7}, {"ar": {"phi": 0.7, "total_sd": 0.3}}]}], {"type": "int64"}, 8000, 20,
     ),
     "few whole numbers": ([{"constant": 0.3}, {"white_noise": {"sd": 0.2}}], {"type": "int64"}, 1000, 100),
     "few tenths": ([{"constant": 0.3}, {"white_noise": {"sd": 0.03}}], {"decimals": 1}, 1000, 100),
 }  # fmt: skip
 
 
+UNSEEN = {"claims", "few whole numbers", "few tenths"}  # cells so coarse that nothing about the spread can be judged
+
+
 @pytest.mark.parametrize("case", CONTRARY)
 def test_the_ends_of_laws_the_starts_of_walks_and_coarse_cells(case):
     entries, store, paths, steps = CONTRARY[case]
-    verdict = verdict_of(entries, store, 6, paths, steps, false_alarm=1e-6)  # nine of them: 1e-5 in all, seed fixed
-    assert verdict.agrees is not False, verdict.headline
+    verdict = verdict_of(entries, store, 6, paths, steps, false_alarm=1e-8)  # nine of them: 9e-8 of the suite's 1e-6
+    assert verdict.agrees is (None if case in UNSEEN else True), verdict.to_text()
     assert any(row.outcome == "agrees" and row.what == "mean" for row in verdict.rows)
 
 
