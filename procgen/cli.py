@@ -199,6 +199,23 @@ def terms(
 
 
 @app.command(
+    short_help="Print the JSON Schema of the spec language, for editors.",
+    epilog="\b\nExample:\n  procgen schema > procgen.schema.json",
+)
+@guarded
+def schema() -> None:
+    """Print the spec language as a JSON Schema (2020-12), with which an editor completes and checks while one types.
+
+    The reader of the other commands has the last word: it knows the rules that join parameters, names and steps.
+    """
+    from json import dumps
+
+    from procgen.report.schema import schema as spec_schema
+
+    printed(dumps(spec_schema(), indent=1, ensure_ascii=False))
+
+
+@app.command(
     short_help="Compare values with the digests in their manifest.",
     epilog="\b\nExamples:\n  procgen digest build/pump-flow\n  procgen digest build/pump-flow --redraw",
 )

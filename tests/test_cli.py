@@ -57,7 +57,7 @@ def rendered(tmp_path) -> Path:
 
 def test_help_names_every_command_and_shows_an_example_of_each():
     text = Result("-h").out
-    for name in ("render", "validate", "theory", "terms", "digest"):
+    for name in ("render", "validate", "theory", "terms", "schema", "digest"):
         assert f"  {name} " in text
         page = Result(name, "--help").out
         assert f"procgen {name}" in page.partition("Example")[2]
@@ -183,6 +183,12 @@ def test_terms_have_a_line_each_and_every_one_has_a_page():
         assert name in screen
         page = Result("terms", name)
         assert page.code == 0 and page.out.startswith(f"{name}: ")
+
+
+def test_schema_is_the_json_schema_of_the_language():
+    from procgen.report.schema import schema
+
+    assert json.loads(Result("schema").out) == schema()
 
 
 def test_digest_ends_with_0_when_values_are_as_recorded_and_1_when_not(rendered):

@@ -7,7 +7,7 @@ from typing import Any
 
 import numpy as np
 
-from procgen.spec.declare import INVALID, Domain, Parameter, Reading, Real, Reals, read_each
+from procgen.spec.declare import INVALID, Domain, Parameter, Reading, Real, Reals, Schema, read_each
 from procgen.spec.links import Links
 from procgen.spec.model import Correlation
 from procgen.spec.tree import Tree
@@ -35,6 +35,10 @@ class Names(Domain):
             return reader.expected(tree, self.describe())
         return tree.value
 
+    def schema(self) -> Schema:
+        most = {"maxItems": self.exactly} if self.exactly else {}
+        return {"type": "array", "items": {"type": "string"}, "minItems": 2, **most}
+
 
 class Matrix(Domain):
     """A list of rows of numbers; read as a tuple of tuples of floats."""
@@ -47,6 +51,9 @@ class Matrix(Domain):
             return reader.expected(tree, self.describe())
         rows = tuple([Reals(at_least=-1.0, at_most=1.0).read(row, reader) for row in tree.value])
         return INVALID if INVALID in rows else rows
+
+    def schema(self) -> Schema:
+        return {"type": "array", "items": {"type": "array", "items": Real(at_least=-1, at_most=1).schema()}}
 
 
 _VALUE = Parameter("value", "ρ", Real(above=-1.0, below=1.0), "correlation of the primary normals")

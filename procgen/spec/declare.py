@@ -21,9 +21,11 @@ from procgen.spec.domains import (
     Reading,
     Real,
     Reals,
+    Schema,
     Span,
     Text,
     Whole,
+    one_or_list,
 )
 from procgen.spec.model import Frozen
 from procgen.spec.tree import Tree
@@ -44,9 +46,13 @@ __all__ = [
     "Reals",
     "Record",
     "Records",
+    "Schema",
     "Span",
     "Text",
     "Whole",
+    "mapping",
+    "mapping_of",
+    "one_or_list",
     "read_each",
     "read_parameters",
 ]
@@ -109,6 +115,13 @@ class Parameter:
         scale = steps if self.per == "rate" else math.sqrt(steps)
         return tuple(v / scale for v in value) if isinstance(value, tuple) else value / scale
 
+    def schema(self) -> Schema:
+        """Return what may be written for it as JSON Schema, with its meaning."""
+        value = self.domain.schema()
+        if self.per and not self.domain.structured:
+            value = {"anyOf": [value, mapping({"value": value, "per": {"type": "string"}}, ("value", "per"))]}
+        return {"description": f"{self.meaning}: {self.domain.describe()}", **value}
+
 
 @dataclass(frozen=True)
 class LawOf(Domain):
@@ -149,6 +162,9 @@ class LawOf(Domain):
             return {p.name: p.domain.default(p.default, reader) for p in law.parameters}
         return read_parameters(inner, law.parameters, reader)
 
+    def schema(self) -> Schema:
+        return {"$ref": "#/$defs/law"}
+
 
 class Record(Domain):
     """A mapping with declared keys; read as a dict."""
@@ -165,6 +181,9 @@ class Record(Domain):
         if not tree.is_map:
             return reader.expected(tree, self.describe())
         return read_parameters(tree, self.parameters, reader)
+
+    def schema(self) -> Schema:
+        return mapping_of(self.parameters)
 
 
 class Records(Domain):
@@ -185,6 +204,9 @@ class Records(Domain):
         values = tuple([read_parameters(t, self.parameters, reader) for t in trees])
         return INVALID if any(v is INVALID for v in values) else values
 
+    def schema(self) -> Schema:
+        return one_or_list(mapping_of(self.parameters))
+
 
 @dataclass(frozen=True)
 class Body(Domain):
@@ -197,6 +219,20 @@ class Body(Domain):
 
     def read(self, tree: Tree, reader: Reading) -> Any:
         return reader.body(tree)
+
+    def schema(self) -> Schema:
+        return {"$ref": "#/$defs/body"}
+
+
+def mapping(properties: Schema, required: Iterable[str] = ()) -> Schema:
+    """Return the schema of a mapping with these keys and no others."""
+    return {"type": "object", "properties": properties, "required": [*required], "additionalProperties": False}
+
+
+def mapping_of(parameters: Iterable[Parameter]) -> Schema:
+    """Return the schema of a mapping with declared keys."""
+    parameters = tuple(parameters)
+    return mapping({p.name: p.schema() for p in parameters}, [p.name for p in parameters if p.required])
 
 
 def read_parameters(tree: Tree, parameters: Sequence[Parameter], reader: Reading) -> Any:

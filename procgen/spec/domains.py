@@ -19,6 +19,9 @@ if TYPE_CHECKING:
     from procgen.spec.tree import Tree
 
 
+Schema = dict[str, Any]  # a part of a JSON Schema (2020-12)
+
+
 class _Sentinel:
     """A named constant that is only ever compared by identity."""
 
@@ -67,6 +70,10 @@ class Domain:
         """Return the value that a declared default stands for."""
         return value
 
+    def schema(self) -> Schema:
+        """Return the set as JSON Schema: never tighter than `read`, which has the last word."""
+        return {}
+
 
 @dataclass(frozen=True)
 class Real(Domain):
@@ -91,6 +98,15 @@ class Real(Domain):
         if not math.isfinite(number):
             return reader.expected(tree, self.describe(), "the number must be finite")
         return number if self.holds(number) else reader.expected(tree, self.describe())
+
+    def schema(self) -> Schema:
+        limits = {
+            "exclusiveMinimum": self.above,
+            "exclusiveMaximum": self.below,
+            "minimum": self.at_least,
+            "maximum": self.at_most,
+        }
+        return {"type": "number"} | {word: limit for word, limit in limits.items() if limit is not None}
 
     def holds(self, number: float) -> bool:
         """Return whether a finite number lies within the bounds."""
@@ -123,6 +139,10 @@ class Whole(Domain):
             return reader.expected(tree, self.describe())
         return value
 
+    def schema(self) -> Schema:
+        limits = {"minimum": self.at_least, "maximum": self.at_most}
+        return {"type": "integer"} | {word: limit for word, limit in limits.items() if limit is not None}
+
 
 @dataclass(frozen=True)
 class Reals(Domain):
@@ -152,6 +172,9 @@ class Reals(Domain):
             return reader.expected(tree, self.describe())
         return INVALID if any(v is INVALID for v in values) else values
 
+    def schema(self) -> Schema:
+        return one_or_list(self.each.schema(), self.min_length)
+
 
 @dataclass(frozen=True)
 class Text(Domain):
@@ -166,6 +189,9 @@ class Text(Domain):
         quotable = tree.is_scalar and tree.value is not None
         return reader.expected(tree, self.describe(), "put it in quotes" if quotable else "")
 
+    def schema(self) -> Schema:
+        return {"type": "string"}
+
 
 @dataclass(frozen=True)
 class Flag(Domain):
@@ -176,6 +202,9 @@ class Flag(Domain):
 
     def read(self, tree: Tree, reader: Reading) -> Any:
         return tree.value if isinstance(tree.value, bool) else reader.expected(tree, self.describe())
+
+    def schema(self) -> Schema:
+        return {"type": "boolean"}
 
 
 class Choice(Domain):
@@ -192,6 +221,9 @@ class Choice(Domain):
             return tree.value
         return reader.expected(tree, self.describe(), did_you_mean(tree.value, self.words))
 
+    def schema(self) -> Schema:
+        return {"enum": list(self.words)}
+
 
 @dataclass(frozen=True)
 class Span(Domain):
@@ -205,6 +237,9 @@ class Span(Domain):
             return _steps(tree, reader, self, Real(above=0.0))
         return _on_grid(tree, reader, "span_steps")
 
+    def schema(self) -> Schema:
+        return {"anyOf": [{"type": "number", "exclusiveMinimum": 0}, {"type": "string"}]}
+
 
 @dataclass(frozen=True)
 class Moment(Domain):
@@ -217,6 +252,15 @@ class Moment(Domain):
         if not isinstance(tree.value, str):
             return _steps(tree, reader, self, Real())
         return _on_grid(tree, reader, "moment_steps")
+
+    def schema(self) -> Schema:
+        return {"type": ["number", "string"]}
+
+
+def one_or_list(each: Schema, least: int = 1) -> Schema:
+    """Return the schema of a list, of which one alone may stand for a list of one."""
+    many: Schema = {"type": "array", "items": each, "minItems": least}
+    return many if least > 1 else {"anyOf": [each, many]}
 
 
 def _steps(tree: Tree, reader: Reading, domain: Domain, number: Real) -> Any:

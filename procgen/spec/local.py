@@ -10,7 +10,7 @@ from typing import Any
 import numpy as np
 
 from procgen.spec.calendar import Grid
-from procgen.spec.domains import INVALID, Choice, Domain, Reading
+from procgen.spec.domains import INVALID, Choice, Domain, Reading, Schema, one_or_list
 from procgen.spec.tree import Tree
 from procgen.spec.units import DAY, parse_date
 
@@ -160,6 +160,9 @@ class CalendarDays(Domain):
             return reader.expected(tree, "a day such as 2027-12-24, or 12-24 for every year")
         return yearly or (moment.date() - date(1970, 1, 1)).days  # type: ignore[union-attr]
 
+    def schema(self) -> Schema:
+        return one_or_list({"type": "string", "maxLength": 10}, 0)
+
 
 class EveryYear(Domain):
     """A day of every year; read as a YearDay."""
@@ -173,6 +176,9 @@ class EveryYear(Domain):
             return reader.expected(tree, self.describe())
         clock = _clock(tree, reader)
         return INVALID if clock is INVALID else YearDay(*found, clock)
+
+    def schema(self) -> Schema:
+        return {"type": "string"}
 
 
 def month_day(text: str) -> tuple[int, int] | None:

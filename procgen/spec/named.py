@@ -5,7 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 from typing import Any
 
-from procgen.spec.declare import INVALID, Domain, Reading, Reals
+from procgen.spec.declare import INVALID, Domain, Reading, Reals, Schema
 from procgen.spec.entries import read_name
 from procgen.spec.model import Frozen
 from procgen.spec.tree import Tree
@@ -29,6 +29,10 @@ class Named(Domain):
         sound = len(reader.faults) == before and INVALID not in values.values()
         return Frozen(values) if sound else INVALID
 
+    def schema(self) -> Schema:
+        names = {"propertyNames": {"$ref": "#/$defs/name"}}
+        return {"type": "object", "additionalProperties": self.each.schema(), "minProperties": 1, **names}
+
 
 @dataclass(frozen=True)
 class Names(Domain):
@@ -46,6 +50,9 @@ class Names(Domain):
             return INVALID
         return names if len(set(names)) == len(names) else reader.expected(tree, self.describe())
 
+    def schema(self) -> Schema:
+        return {"type": "array", "items": {"$ref": "#/$defs/name"}, "minItems": 2, "uniqueItems": True}
+
 
 @dataclass(frozen=True)
 class Rows(Domain):
@@ -61,3 +68,7 @@ class Rows(Domain):
             return reader.expected(tree, self.describe())
         rows = tuple([self.each.read(row, reader) for row in tree.value])
         return INVALID if any(row is INVALID for row in rows) else rows
+
+    def schema(self) -> Schema:
+        row = {"type": "array", "items": self.each.each.schema(), "minItems": 1}
+        return {"type": "array", "items": row, "minItems": 1}

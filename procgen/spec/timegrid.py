@@ -9,7 +9,7 @@ from zoneinfo import ZoneInfo, available_timezones
 import numpy as np
 
 from procgen.spec.calendar import LAST_YEAR, Grid
-from procgen.spec.declare import INVALID, Choice, Domain, Parameter, Reading, Whole, read_each
+from procgen.spec.declare import INVALID, Choice, Domain, Parameter, Reading, Schema, Whole, one_or_list, read_each
 from procgen.spec.tree import Tree
 from procgen.spec.units import parse_date, parse_length
 from procgen.spec.words import did_you_mean
@@ -36,6 +36,9 @@ class Every(Domain):
             return reader.expected(tree, self.describe(), hint)
         return int(count), unit
 
+    def schema(self) -> Schema:
+        return {"type": "string"}
+
 
 class Date(Domain):
     """A date, with or without a time, and an offset where a time happens twice; read as a datetime."""
@@ -46,6 +49,9 @@ class Date(Domain):
     def read(self, tree: Tree, reader: Reading) -> Any:
         moment = parse_date(tree.value) if isinstance(tree.value, str) else None
         return reader.expected(tree, self.describe()) if moment is None else moment
+
+    def schema(self) -> Schema:
+        return {"type": "string"}
 
 
 class Zone(Domain):
@@ -64,6 +70,9 @@ class Zone(Domain):
             return reader.expected(tree, self.describe(), did_you_mean(name, available_timezones()))
         return name
 
+    def schema(self) -> Schema:
+        return {"type": "string", "maxLength": 100}
+
 
 class Dates(Domain):
     """A list of days, one standing for a list of one; read as a sorted tuple of dates."""
@@ -74,6 +83,9 @@ class Dates(Domain):
     def read(self, tree: Tree, reader: Reading) -> Any:
         days = [self._day(t, reader) for t in (tree.value if tree.is_list else (tree,))]
         return INVALID if INVALID in days else tuple(sorted(set(days)))
+
+    def schema(self) -> Schema:
+        return one_or_list({"type": "string", "maxLength": 10}, 0)
 
     def _day(self, tree: Tree, reader: Reading) -> date | Any:
         moment = parse_date(tree.value) if isinstance(tree.value, str) and len(tree.value) <= 10 else None

@@ -1,0 +1,88 @@
+"""The spec language as a JSON Schema (2020-12), for editors that complete and underline while one types.
+
+It is made from the declarations that the reader works by, and is never tighter than the reader: what it refuses, the
+reader refuses too. What joins parameters, names and steps (roots, correlations, cycles, dates) only the reader knows.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from typing import Any
+
+from procgen.chance.laws import LAWS, Law
+from procgen.report.catalogue import purpose
+from procgen.spec.correlated import FORMS
+from procgen.spec.declare import Body, Schema, mapping, mapping_of, one_or_list
+from procgen.spec.entries import REPLACED, SPREAD
+from procgen.spec.reader import HEAD, SERIES
+from procgen.spec.timegrid import TIME
+from procgen.terms import catalogue
+
+BODY: Schema = {"$ref": "#/$defs/body"}
+NAME: Schema = {"$ref": "#/$defs/name"}
+
+
+def schema() -> Schema:
+    """The JSON Schema of a spec, as plain data."""
+    head = mapping_of(HEAD)
+    sections = {
+        "time": mapping_of(TIME),
+        "reuse": {"description": "a home for YAML anchors, otherwise ignored"},
+        "shared": named({"anyOf": [BODY, mapping({"of": BODY}, ["of"])]}),
+        "series": named({"anyOf": [BODY, mapping_of(SERIES)]}),
+        "correlation": one_or_list({"anyOf": [mapping_of(form) for form in FORMS.values()]}, 0),
+    }
+    return {
+        "$schema": "https://json-schema.org/draft/2020-12/schema",
+        "title": "A procgen spec",
+        **mapping(head["properties"] | sections, [*head["required"], "time", "series"]),
+        "$defs": {
+            "name": {"type": "string", "pattern": "^[A-Za-z_][A-Za-z0-9_]*$"},
+            "body": one_or_list({"$ref": "#/$defs/entry"}),
+            "entry": entry(),
+            "law": {"anyOf": [law for name in LAWS for law in ways(LAWS[name])]},
+        },
+    }
+
+
+def named(body: Schema) -> Schema:
+    """Bodies by name."""
+    return {"type": "object", "additionalProperties": body, "propertyNames": NAME, "minProperties": 1}
+
+
+def entry() -> Schema:
+    """One term: exactly one kind, and what may stand beside it."""
+    kinds = {kind: {"description": term.purpose, **term_schema(term)} for kind, term in catalogue().items()}
+    beside = {
+        "as": {"description": "label of the term; its kind when absent", **NAME},
+        "times": {"description": "factor of the term", "type": "number"},
+    }
+    return {**mapping(kinds | beside), "oneOf": [{"required": [kind]} for kind in kinds]}
+
+
+def term_schema(term: Any) -> Schema:
+    """What may be written behind a kind: its parameters, or what its short form takes."""
+    long = parameters_schema(term)
+    if any(p.name == "of" and isinstance(p.domain, Body) for p in term.parameters):
+        return {"anyOf": [long, BODY]}
+    brief = next((p for p in term.parameters if p.name == term.short), None)
+    return long if brief is None else {"anyOf": [long, brief.schema()]}
+
+
+def parameters_schema(term: Any) -> Schema:
+    """The parameters of a kind; of those that say the spread, exactly one."""
+    form = mapping_of(term.parameters)
+    spread = [p.name for p in term.parameters if p.name in SPREAD]
+    if term.takes_shock:
+        form["properties"]["shock"] = {"description": "a noise that drives it", "$ref": "#/$defs/entry"}
+    if term.takes_shock or len(spread) == 2:
+        form["required"] = [name for name in form["required"] if name not in REPLACED]
+        form["oneOf"] = [{"required": [name]} for name in (*spread, *(["shock"] if term.takes_shock else []))]
+    return form
+
+
+def ways(law: type[Law]) -> Iterable[Schema]:
+    """The ways to write a law: its name alone where that suffices, and its name with parameters."""
+    if not any(p.required for p in law.parameters):
+        yield {"const": law.name, "description": purpose(law)}
+    yield mapping({law.name: {"description": purpose(law), **mapping_of(law.parameters)}}, [law.name])
