@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from functools import lru_cache
+
 import numpy as np
 
 from procgen.theory.arma import CrossCovariance, cross_covariance
@@ -58,7 +60,7 @@ def _plain(space: Space, x: Linear, y: Linear, t: np.ndarray, s: np.ndarray) -> 
             if scale == 0.0:
                 continue
             gamma = cross_covariance(a.phi, b.phi)
-            by, weights = _shifts(delays_a, delays_b)
+            by, weights = _shifts_between(x, a, y, b)
             total += _summed(gamma, t - s, by, scale * weights)
             for back, weight in frozen_b.items():
                 for delay, c in delays_a.items():
@@ -80,6 +82,11 @@ def _summed(gamma: CrossCovariance, gaps: np.ndarray, by: np.ndarray, weights: n
         return total
     distinct, which = np.unique(gaps, return_inverse=True)
     return np.array([weights @ gamma(gap + by) for gap in distinct])[which].reshape(gaps.shape)
+
+
+@lru_cache(maxsize=64)
+def _shifts_between(x: Linear, a: Base, y: Linear, b: Base) -> tuple[np.ndarray, np.ndarray]:
+    return _shifts(_by_base(x)[a][0], _by_base(y)[b][0])
 
 
 def _shifts(a: dict[int, float], b: dict[int, float]) -> tuple[np.ndarray, np.ndarray]:
@@ -107,6 +114,7 @@ def _convolved(a: np.ndarray, b: np.ndarray) -> np.ndarray:
     return fftconvolve(a, b)
 
 
+@lru_cache(maxsize=64)
 def _by_base(form: Linear) -> dict[Base, tuple[dict[int, float], dict[int, float]]]:
     """For each base, the coefficients by delay and by frozen lag."""
     parts: dict[Base, tuple[dict[int, float], dict[int, float]]] = {}

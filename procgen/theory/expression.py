@@ -64,10 +64,11 @@ class Expression:
 
     def difference(self, lag: int = 1, order: int = 1) -> Expression:
         """(1 - B^lag)^order of the series."""
-        out = self
+        linear = Expression(self.space, known.constant(0.0), self.linear.difference(lag, order))
+        rest = Expression(self.space, self.mean_path, Linear(), self.terms)
         for _ in range(order):
-            out = out + out.lag(lag) * -1.0
-        return out
+            rest = rest + rest.lag(lag) * -1.0
+        return linear + rest
 
     def integrate(self, start: float = 0.0, every: int = 1) -> Expression:
         """y(t) = y(t - every) + x(t), `start` at the `every` steps up to step 0, followed backwards below them."""

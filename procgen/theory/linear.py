@@ -32,6 +32,7 @@ import numpy as np
 
 from procgen.theory.sources import Source
 
+FEW = 4096  # so many delays are differenced one by one
 
 @dataclass(frozen=True, eq=False)
 class Base:
@@ -88,11 +89,12 @@ def base_of(key: Key) -> Base:
 class Linear(Mapping[Key, float]):
     """A linear form, keys to coefficients; immutable, zero coefficients dropped, equal when they are."""
 
-    __slots__ = ("_coefficients", "_hash")
+    __slots__ = ("_coefficients", "_hash", "_sources")
 
     def __init__(self, coefficients: Mapping[Any, float] | None = None):
         self._coefficients: dict[Key, float] = {key: c for key, c in (coefficients or {}).items() if c != 0.0}
         self._hash: int | None = None
+        self._sources: dict[Source, None] | None = None
 
     def __getitem__(self, key: Key) -> float:
         return self._coefficients[key]
@@ -132,6 +134,26 @@ class Linear(Mapping[Key, float]):
                     _window(total, key.of, by, 0, -c)
         return Linear(total)
 
+    def difference(self, by: int, order: int) -> Linear:
+        """(1 - B^by)^order of the form; sums turn into windows at once, delays are differenced as arrays."""
+        if order == 0:
+            return self
+        total: dict[Key, float] = {}
+        delays: dict[Base, dict[int, float]] = {}
+        rest: dict[Key, float] = {}
+        for key, c in self.items():
+            if isinstance(key, At):
+                delays.setdefault(key.base, {})[key.delay] = c
+            else:
+                rest[key] = c
+        for base, weights in delays.items():
+            for delay, c in _differenced(weights, by, order).items():
+                _add(total, At(base, delay), c)
+        if rest:
+            once = Linear(rest) + Linear(rest).lag(by).scaled(-1.0)
+            _add_form(total, once.difference(by, order - 1), 1.0)
+        return Linear(total)
+
     def integrate(self) -> Linear:
         """The running sum from step 1 on, split over the keys."""
         total: dict[Key, float] = {}
@@ -162,12 +184,16 @@ class Linear(Mapping[Key, float]):
     def only(self, sources: Iterable[Source]) -> Linear:
         """The part that is driven by these sources."""
         chosen = set(sources)
+        if chosen >= self.sources.keys():
+            return self
         return Linear({key: c for key, c in self.items() if base_of(key).source in chosen})
 
     @property
     def sources(self) -> dict[Source, None]:
         """The sources, in order of first appearance."""
-        return {base_of(key).source: None for key in self}
+        if self._sources is None:
+            self._sources = {base_of(key).source: None for key in self}
+        return self._sources
 
     @property
     def is_plain(self) -> bool:
@@ -182,6 +208,23 @@ def _add(total: dict[Key, float], key: Key, c: float) -> None:
 def _add_form(total: dict[Key, float], form: Linear, c: float) -> None:
     for key, weight in form.items():
         _add(total, key, c * weight)
+
+
+def _differenced(weights: dict[int, float], by: int, order: int) -> dict[int, float]:
+    """Weights by delay of (1 - B^by)^order of a sum of delays."""
+    if len(weights) * (order + 1) <= FEW:  # perhaps far apart
+        total: dict[int, float] = {}
+        for turn in range(order + 1):
+            for delay, c in weights.items():
+                at = delay + turn * by
+                total[at] = total.get(at, 0.0) + (-1.0) ** turn * comb(order, turn) * c
+        return total
+    dense = np.zeros(max(weights) + order * by + 1)
+    dense[list(weights)] = list(weights.values())
+    for _ in range(order):
+        dense[by:] -= dense[:-by].copy()
+    (at,) = np.nonzero(dense)
+    return dict(zip(at.tolist(), dense[at].tolist(), strict=True))
 
 
 def _seasons_ago(key: Season, by: int) -> Linear:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import time
 import warnings
+from math import comb
 
 import numpy as np
 import pytest
@@ -51,3 +52,14 @@ def test_a_garch_long_ago_has_the_moments_of_now():
     np.testing.assert_allclose(
         both["y"].autocovariance_of_squares([0, 3]), both["x"].autocovariance_of_squares([0, 3]), rtol=1e-9
     )
+
+
+def test_a_difference_of_a_walk_over_many_steps_is_quick_and_exact():
+    """Over blocks of 8,000 shocks with the weights (-1)^k C(11, k), whose squares add up to C(22, 11)."""
+    start = time.process_time()
+    x = theory_of("x: {difference: {of: [{random_walk: {sd: 1}}], by: 8000, order: 12}}")["x"]
+    rho = x.autocorrelation(np.array([0, 8000, 95999, 96000]))
+    assert time.process_time() - start < 5.0  # on a busy machine; it took a minute there with a dictionary at a time
+    ends = [1, -comb(22, 10) / comb(22, 11), -1 / (8000 * comb(22, 11)), 0]
+    np.testing.assert_allclose(x.variance(5), 8000 * comb(22, 11), rtol=1e-12)
+    np.testing.assert_allclose(rho, ends, rtol=1e-9, atol=1e-15)
