@@ -220,6 +220,11 @@ def signed(x: float, what: str) -> str:
     return f"{'−' if x < 0 else '+'} {size}{' ' if size and what else ''}{what}"
 
 
+def steps_since(x: float) -> str:
+    """`t`, `(t − 5)` or `(t + 5)`: the steps since x, in an equation."""
+    return f"(t {signed(-x, '')})" if x else "t"
+
+
 def stated(name: str, past: Sequence[float]) -> str:
     """`x[−2] = 4, x[−1] = 5` for a stated past, oldest first; for the end of an equation."""
     return ", ".join(f"{name}[−{len(past) - i}] = {number(value)}" for i, value in enumerate(past))

@@ -10,7 +10,7 @@ from procgen.chance.portable import exp
 from procgen.spec.declare import Parameter, Real, Reals, Record
 from procgen.terms.arima import Integrated
 from procgen.terms.arma import Arma
-from procgen.terms.base import LAW, TOTAL_SD, number, signed
+from procgen.terms.base import LAW, TOTAL_SD, number, signed, stated
 
 
 class OrnsteinUhlenbeck(Integrated):
@@ -79,7 +79,8 @@ class OrnsteinUhlenbeck(Integrated):
     def equation(self, *inputs):
         phi, level = number(_kept(self.rate)), f"{number(self.level)} + " if self.level else ""
         inside = f"(x[t−1] {signed(-self.level, '')})" if self.level else "x[t−1]"
-        return f"x[t] = {level}{phi} {inside} + a[t],  {phi} = exp(−{number(self.rate)})"
+        past = "" if self.before is None else f",  {stated('x', self.before['x'][-1:])}"
+        return f"x[t] = {level}{phi} {inside} + a[t],  {phi} = exp(−{number(self.rate)}){past}"
 
 
 def _kept(rate):

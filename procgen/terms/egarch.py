@@ -11,7 +11,7 @@ from procgen.chance.portable import exp, log
 from procgen.spec.declare import Parameter, Real
 from procgen.terms.base import LAW, Ahead, Draw, Term, Unknown, number, rows, signed, without_gap
 from procgen.terms.garch import INFINITE
-from procgen.terms.gjr import BEFORE
+from procgen.terms.gjr import BEFORE, left_from
 from procgen.terms.start import companion, decay_length
 
 FORGOTTEN = 1e-9
@@ -180,4 +180,4 @@ class Egarch(Term):
     def equation(self, *inputs):
         parts = [number(self.mean_log() * (1.0 - self.beta)), signed(self.beta, "ln h[t−1]")]
         parts += [signed(self.alpha, f"(|z[t−1]| − {number(self.law.mean_size)})"), signed(self.gamma, "z[t−1]")]
-        return f"e[t] = √h[t] z[t],  ln h[t] = {' '.join(parts)},  z independent {self.law}"
+        return f"e[t] = √h[t] z[t],  ln h[t] = {' '.join(parts)},  z independent {self.law}{left_from(self.before)}"

@@ -6,7 +6,7 @@ import numpy as np
 
 from procgen.chance.portable import exp
 from procgen.spec.declare import Body, Choice, Moment, Parameter, Real, Span
-from procgen.terms.base import Ahead, Array, Term, number
+from procgen.terms.base import Ahead, Array, Term, number, steps_since
 from procgen.terms.level import Known
 
 LOG_2 = 0.6931471805599453
@@ -52,12 +52,12 @@ class Event(Known):
 
     def equation(self, *inputs):
         start, length = number(self.values["at"]), number(1.0 if self.length is None else self.length)
-        size = number(self.size)
+        size, gone = number(self.size), steps_since(self.values["at"])
         return {
             "step": f"x[t] = {size} for t ≥ {start}, else 0",
             "pulse": f"x[t] = {size} for {start} ≤ t < {start} + {length}, else 0",
-            "ramp": f"x[t] = {size} min(max((t − {start})/{length}, 0), 1)",
-            "decay": f"x[t] = {size} · 2^(−(t − {start})/{length}) for t ≥ {start}, else 0",
+            "ramp": f"x[t] = {size} min(max({gone}/{length}, 0), 1)",
+            "decay": f"x[t] = {size} · 2^(−{gone}/{length}) for t ≥ {start}, else 0",
         }[self.shape]
 
 
@@ -110,5 +110,5 @@ class Schedule(Term):
     def equation(self, first, second):
         if self.fade is None:
             return f"y[t] = {first}[t] for t < {number(self.until)}, then {second}[t]"
-        share = f"w = min(max((t − {number(self.until)})/{number(self.fade)}, 0), 1)"
+        share = f"w = min(max({steps_since(self.until)}/{number(self.fade)}, 0), 1)"
         return f"y[t] = (1 − w) {first}[t] + w {second}[t],  {share}"

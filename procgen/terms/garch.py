@@ -9,7 +9,7 @@ import numpy as np
 
 from procgen.chance.kernel import kernel
 from procgen.spec.declare import Flag, Parameter, Real, Reals, Record
-from procgen.terms.base import LAW, Ahead, Draw, Term, number, rows, signed, without_gap
+from procgen.terms.base import LAW, Ahead, Draw, Term, number, rows, signed, stated, without_gap
 from procgen.terms.start import companion, decay_length
 
 FORGOTTEN = 1e-9
@@ -263,7 +263,16 @@ class Garch(Term):
         parts = [number(self.level())]
         parts += [signed(c, f"e²[t−{i}]") for i, c in enumerate(self.alpha, start=1)]
         parts += [signed(c, f"h[t−{j}]") for j, c in enumerate(self.beta, start=1)]
-        return f"e[t] = √h[t] z[t],  h[t] = {' '.join(parts)},  z independent {self.law}"
+        return f"e[t] = √h[t] z[t],  h[t] = {' '.join(parts)},  z independent {self.law}{self._left_from()}"
+
+    def _left_from(self):
+        """What the recursion reads of the given past, for the end of the equation."""
+        given = self.before or {"variance": (), "shocks": ()}
+        p, q = len(self.alpha), len(self.beta)
+        past = [stated("h", given["variance"][-q:] if q else ()), stated("e", given["shocks"][-p:])]
+        if not given["shocks"]:
+            past.append(stated("e²", given["variance"][-p:]))
+        return "".join(f",  {part}" for part in past if part)
 
 
 class Arch(Garch):

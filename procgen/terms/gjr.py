@@ -9,7 +9,7 @@ import numpy as np
 
 from procgen.chance.kernel import kernel
 from procgen.spec.declare import Parameter, Real, Reals, Record
-from procgen.terms.base import LAW, Ahead, Draw, Term, number, rows, signed, without_gap
+from procgen.terms.base import LAW, Ahead, Draw, Term, number, rows, signed, stated, without_gap
 from procgen.terms.garch import FORGOTTEN, INFINITE, OMEGA, SD
 from procgen.terms.start import companion, decay_length
 
@@ -186,10 +186,17 @@ class GjrGarch(Term):
     def equation(self, *inputs):
         parts = [number(self.level()), signed(self.alpha, "e²[t−1]"), signed(self.gamma, "e²[t−1] I(e[t−1] < 0)")]
         parts += [signed(self.beta, "h[t−1]")] if self.beta else []
-        return f"e[t] = √h[t] z[t],  h[t] = {' '.join(parts)},  z independent {self.law}"
+        return f"e[t] = √h[t] z[t],  h[t] = {' '.join(parts)},  z independent {self.law}{left_from(self.before)}"
 
 
 _NAMED = "alpha + beta + gamma E z² I(z < 0)"
+
+
+def left_from(before):
+    """The variance and the shock just before step 0 where they are given, for the end of an equation."""
+    if before is None:
+        return ""
+    return f",  {stated('h', before['variance'][-1:])}, {stated('e', before['shocks'][-1:])}"
 
 
 def downside(law):

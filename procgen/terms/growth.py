@@ -6,7 +6,7 @@ import numpy as np
 
 from procgen.chance.portable import exp, log
 from procgen.spec.declare import Moment, Parameter, Real
-from procgen.terms.base import Array, number, signed
+from procgen.terms.base import Array, number, signed, steps_since
 from procgen.terms.level import Known
 
 LARGEST = 600.0  # exponents are held within ±600: no level that means anything is near e^600
@@ -29,7 +29,7 @@ class ExponentialTrend(Known):
         return self.base + self.level * _exp(self.rate * steps.astype(np.float64))
 
     def equation(self, *inputs):
-        return f"x[t] = {number(self.base)} {signed(self.level, f'exp({number(self.rate)} t)')}"
+        return _beside(self.base, signed(self.level, f"exp({number(self.rate)} t)"))
 
 
 class LogisticTrend(Known):
@@ -51,8 +51,8 @@ class LogisticTrend(Known):
         return self.floor + (self.capacity - self.floor) / (1.0 + rest)
 
     def equation(self, *inputs):
-        bend = f"(1 + exp(−{number(self.rate)}(t − {number(self.midpoint)})))"
-        return f"x[t] = {number(self.floor)} + {number(self.capacity - self.floor)}/{bend}"
+        bend = f"/(1 + exp(−{signed(self.rate, steps_since(self.midpoint)).removeprefix('+ ')}))"
+        return _beside(self.floor, signed(self.capacity - self.floor, "") + bend)
 
 
 class DampedTrend(Known):
@@ -75,8 +75,12 @@ class DampedTrend(Known):
 
     def equation(self, *inputs):
         last = self.slope / (1.0 - self.damping)
-        fading = f"(1 − {number(self.damping)}^t)"
-        return f"x[t] = {number(self.level)} {signed(last, fading)}"
+        return _beside(self.level, signed(last, f"(1 − {number(self.damping)}^t)"))
+
+
+def _beside(level: float, rest: str) -> str:
+    """A level and what is added to it; a level of 0 is not written."""
+    return f"x[t] = {number(level)} {rest}" if level else f"x[t] = {rest.removeprefix('+ ')}"
 
 
 def _exp(x: Array) -> Array:

@@ -6,7 +6,7 @@ import numpy as np
 
 from procgen.chance.portable import cos_turns
 from procgen.spec.declare import Choice, Moment, Parameter, Real, Reals, Records, Span, Whole
-from procgen.terms.base import number, signed
+from procgen.terms.base import number, signed, steps_since
 from procgen.terms.level import Known
 
 
@@ -92,7 +92,7 @@ class Seasonal(Known):
         waves = []
         for place, wave in enumerate(self.harmonics, start=1):
             order = wave["order"] or place
-            turns = f"cos(2π{'' if order == 1 else order}(t − {number(wave['peak'])})/{number(self.period)})"
+            turns = f"cos(2π{'' if order == 1 else f'·{order}'}{steps_since(wave['peak'])}/{number(self.period)})"
             waves.append(signed(wave["amplitude"], turns))
         return "x[t] = " + " ".join(waves).removeprefix("+ ")
 

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from procgen.spec.declare import Moment, Parameter, Span
-from procgen.terms.base import Array, Term, number
+from procgen.terms.base import Array, Term, number, steps_since
 from procgen.terms.combine import OF
 
 LONGEST = 100_000
@@ -61,8 +61,7 @@ class Hold(Term):
         return axis.held(body, self.read_at, int(self.every))
 
     def equation(self, body):
-        since = "t" if self.first == 0 else f"(t − {number(self.first)})"
-        return f"y[t] = {body}[t − {since} mod {number(self.every)}]"
+        return f"y[t] = {body}[t − {steps_since(self.first)} mod {number(self.every)}]"
 
 
 class RollingMean(Term):

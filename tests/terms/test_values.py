@@ -190,3 +190,36 @@ def test_an_equation_says_from_which_past_it_leaves():
     said = {name: graph.series[name].term.equation() for name in graph.series}
     assert said["a"] == "x[t] = 0.5 x[t−1] + 0.2 x[t−2] + a[t] + 0.3 a[t−1],  x[−2] = 4, x[−1] = 5,  a[−1] = 0.5"
     assert said["w"] == "x[t] = x[t−1] + a[t],  x[−1] = 100" and said["s"].endswith("x[0] = 7")
+
+
+def test_an_equation_says_from_which_variance_it_leaves():
+    graph = graph_of(
+        "  g: {garch: {omega: 1, alpha: [0.1, 0.2], beta: 0.5, before: {variance: [3, 2], shocks: [9, -1, 0.5]}}}\n"
+        "  h: {garch: {omega: 1, alpha: 0.1, beta: 0.5, before: {variance: [3, 2]}}}\n"
+        "  j: {gjr_garch: {omega: 1, alpha: 0.1, gamma: 0.1, beta: 0.5, before: {variance: 2, shocks: -1}}}\n"
+        "  k: {egarch: {scale: 1, alpha: 0.1, gamma: 0.1, beta: 0.5, before: {variance: 2, shocks: -1}}}\n"
+        "  o: {ornstein_uhlenbeck: {rate: 0.1, sd: 1, before: {x: [7, 8]}}}"
+    )
+    ends = {name: graph.series[name].term.equation().split("z independent normal")[-1] for name in "ghjk"}
+    assert ends == {
+        "g": ",  h[−1] = 2,  e[−2] = −1, e[−1] = 0.5",
+        "h": ",  h[−1] = 2,  e²[−1] = 2",
+        "j": ",  h[−1] = 2, e[−1] = −1",
+        "k": ",  h[−1] = 2, e[−1] = −1",
+    }
+    assert graph.series["o"].term.equation().endswith("exp(−0.1),  x[−1] = 8")
+
+
+@pytest.mark.parametrize(
+    ("term", "said"),
+    [
+        ("logistic_trend: {capacity: 3, rate: 1, midpoint: -30}", "x[t] = 3/(1 + exp(−(t + 30)))"),
+        ("logistic_trend: {capacity: 3, rate: 0.5, midpoint: 0, floor: -1}", "x[t] = −1 + 4/(1 + exp(−0.5 t))"),
+        ("exponential_trend: {level: -2, rate: -0.5}", "x[t] = − 2 exp(−0.5 t)"),
+        ("event: {shape: ramp, at: -5, size: 2, length: 3}", "x[t] = 2 min(max((t + 5)/3, 0), 1)"),
+        ("seasonal: {period: 12, harmonics: [{amplitude: 2}, {amplitude: 3, peak: 5}]}",
+         "x[t] = 2 cos(2πt/12) + 3 cos(2π·2(t − 5)/12)"),
+    ],
+)  # fmt: skip
+def test_an_equation_counts_from_where_it_begins(term, said):
+    assert graph_of(f"  x: {{{term}}}").series["x"].term.equation() == said
