@@ -57,7 +57,7 @@ def _many(count: int, what: str) -> str:
 
 def _series(theory: SeriesTheory, facts: dict[str, Any], unit: str | None) -> list[str]:
     lines = [f"{theory.name}{f' ({unit})' if unit else ''}: {facts['stationarity']['verdict']}"]
-    lines += _wrapped(facts["stationarity"]["reasons"])
+    lines += _wrapped(reason for reason in facts["stationarity"]["reasons"] if not _said_below(reason, facts))
     lines += _table("step", facts["steps"], [("mean", facts["mean"]), ("variance", facts["variance"])])
     lines += _memory(theory, facts["steps"], facts["autocovariance"]["lags"])
     if facts["excess_kurtosis"] is not None and abs(facts["excess_kurtosis"]) > 1e-12:
@@ -91,6 +91,13 @@ def _unknown(facts: dict[str, Any]) -> list[str]:
         if what in WANTED or "stationary" in facts["stationarity"]["verdict"]:
             by_reason.setdefault(why, []).append(what.replace("_", " "))
     return [f"{', '.join(names)} unknown: {why}" for why, names in by_reason.items()]
+
+
+def _said_below(reason: str, facts: dict[str, Any]) -> bool:
+    """Whether a verdict's remark on unknown moments comes again with the numbers that are missing."""
+    begins, _, why = reason.partition(" unknown: ")
+    missing = facts.get("unknown", {})
+    return begins in ("mean", "moments") and why in (missing.get(what) for what in WANTED)
 
 
 def _table(head: str, columns: Sequence[int], rows: Sequence[tuple[str, list | None]]) -> list[str]:

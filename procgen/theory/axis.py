@@ -9,6 +9,7 @@ from typing import Any
 import numpy as np
 
 from procgen.theory import known, markov
+from procgen.theory.arma import PowerSeries, spectral_radius
 from procgen.theory.chains import States, Switching
 from procgen.theory.expression import Expression, opaque, product
 from procgen.theory.garch import Garch
@@ -19,7 +20,7 @@ from procgen.theory.logvariance import Egarch, Stochastic
 from procgen.theory.processes import Chain, Curved, Held, Hinged, Process, mean_at
 from procgen.theory.sources import GARCH, IID, PROCESS, SQUARES, Source, Space, roots
 from procgen.theory.unknown import Unknown
-from procgen.theory.verdict import CYCLES, judge
+from procgen.theory.verdict import CYCLES, LEAVES, LEAVES_VARIANCE, UNIT_ROOT, judge
 from procgen.theory.volatility import ConditionalVariance, Gjr, Volatility
 
 
@@ -211,11 +212,13 @@ class Axis:
         note = f"held for {period} steps in {self.name}"
         cycle = frozenset([float(period)])
         says = () if period == 1 else ((CYCLES, note),)
-        path = known.whole(("held", self.name), lambda t: mean_at(x, step_of(np.asarray(t, np.int64))), cycle, note)
+        # A mean that is known as such may lack a past: it is read where the holding reads it, and only there.
+        at = mean_at if x.terms or any(not s.centred for s in x.sources) else _mean_path_at
+        path = known.whole(("held", self.name), lambda t: at(x, step_of(np.asarray(t, np.int64))), cycle, note)
         if x.mean_path.value is not None and not x.terms:
             path = x.mean_path
         elif x.mean_path.value is None:
-            path = known.observed(("held", self.name), path.at, self.horizon, self.name)
+            path = known.observed(("held", self.name), path.at, self.horizon, self.name, settles=x.mean_path.settles)
         return self._process(Held(self.name, x, step_of, says), path) if x.sources else Expression(self.space, path)
 
     def hinge(self, x: Expression) -> Expression:
@@ -281,7 +284,8 @@ class Axis:
         return known.whole(
             ("past", self.name, tuple(values)),
             lambda steps: past[np.clip(np.asarray(steps) + len(past) - 1, 0, len(past) - 1)],
-            note=f"the given past of {self.name}",
+            note=f"{self.name} {LEAVES_VARIANCE}",
+            settles=True,
         )
 
     def _volatile(self, key: str, process: Volatility, before: Sequence[float] | None) -> Expression:
@@ -294,20 +298,23 @@ class Axis:
     def _conditional(self, source: Source, noise: Expression) -> Expression:
         process = source.detail
         if process.started:
-            path = known.whole(("variance", source.key), process.variance_path, note=f"variance of {source.key}")
-            return opaque(self.space, (noise,), f"the variance of {source.key}, which leaves from a given one", path)
+            return self._started_variance(source, noise)
         if not np.isfinite(process.variance):
             return opaque(self.space, (noise,), f"infinite mean of the variance of {source.key}")
         return self._process(ConditionalVariance(source, noise), known.constant(process.variance))
+
+    def _started_variance(self, source: Source, noise: Expression) -> Expression:
+        key, process = source.key, source.detail
+        path = known.whole(
+            ("variance", key), process.variance_path, note=f"variance of {key}", settles=process.total < 1.0
+        )
+        return opaque(self.space, (noise,), f"the variance of {key}, which leaves from a given one", path)
 
     def _variance(self, source: Source) -> Expression:
         process: Garch = source.detail
         if process.started:
             ingredient = Expression(self.space, known.constant(0.0), Linear({At(Base(source, (), True), 0): 1.0}))
-            return opaque(
-                self.space, (ingredient,), f"the variance of {source.key}, which leaves from a given one",
-                known.whole(("variance", source.key), process.variance_path, note=f"variance of {source.key}"),
-            )  # fmt: skip
+            return self._started_variance(source, ingredient)
         squares = squares_of(self.space, source)
         base = self._base(squares, process.persistence, False)
         form = Linear({At(base, delay): c for delay, c in process.variance_weights.items()})
@@ -321,6 +328,10 @@ class Axis:
         if mean.level or mean.slope or any(piece.key[0] != "past" for piece in mean.pieces):
             raise Unknown("a filter that starts from a given past, of a noise with a mean")
         return _forecast(self.name, phi, theta, tuple(before_x), tuple(before_shocks or ()))
+
+
+def _mean_path_at(x: Expression, steps: np.ndarray) -> np.ndarray:
+    return x.mean_path.at(steps)
 
 
 def _white(noise: Expression) -> Expression:
@@ -352,8 +363,6 @@ def _times(one: tuple[float, ...], other: tuple[float, ...]) -> tuple[float, ...
 
 def _forecast(name: str, phi, theta, before_x, before_shocks) -> Known:
     """The path that the recursion takes from a given past when no more shocks come."""
-    from procgen.theory.arma import PowerSeries
-
     p, q = len(phi), len(theta)
     if len(before_x) < p or len(before_shocks) < q:
         raise Unknown("a given past that is shorter than the recursion needs")
@@ -372,4 +381,6 @@ def _forecast(name: str, phi, theta, before_x, before_shocks) -> Known:
 
     if not np.any(reaching) and not np.any(before_x):
         return known.constant(0.0)
-    return known.whole(("forecast", name, phi, theta, before_x, before_shocks), at, note=f"the given past of {name}")
+    settles = spectral_radius(phi) < 1.0 - UNIT_ROOT
+    note = f"{name} {LEAVES}" if settles else f"path of {name} from its given past"
+    return known.whole(("forecast", name, phi, theta, before_x, before_shocks), at, note=note, settles=settles)

@@ -131,13 +131,15 @@ class Known:
         periods = None if mine is None or others is None else mine | others
         keys = sorted((self.key, other.key), key=repr)
         note = "; ".join(dict.fromkeys(self.notes + other.notes))
-        return whole(("*", *keys), lambda t: self.at(t) * other.at(t), periods, note)
+        settles = self.settles and other.settles
+        return whole(("*", *keys), lambda t: self.at(t) * other.at(t), periods, note, settles)
 
     def exp(self) -> Known:
         if self.value is not None:
             with np.errstate(over="ignore", under="ignore"):
                 return constant(float(np.exp(self.value)))
-        return whole(("exp", self.key), lambda steps: np.exp(self.at(steps)), self.periods, "; ".join(self.notes))
+        note = "; ".join(self.notes)
+        return whole(("exp", self.key), lambda t: np.exp(self.at(t)), self.periods, note, self.settles)
 
     def lag(self, by: int) -> Known:
         pieces: dict[Piece, float] = {}
@@ -182,7 +184,9 @@ def whole(
     return Known(pieces={Piece(key, at, periods, note, settles): 1.0})
 
 
-def observed(key: tuple, at: Function, horizon: int, name: str, period: float | None = None) -> Known:
+def observed(
+    key: tuple, at: Function, horizon: int, name: str, period: float | None = None, settles: bool = False
+) -> Known:
     """A function given as such; a constant or a straight line is recognised, up to `horizon` and before step 0."""
     steps = np.concatenate([-_looked_at(EARLIEST)[:0:-1], _looked_at(horizon)])
     values = np.asarray(at(steps), float)
@@ -190,8 +194,8 @@ def observed(key: tuple, at: Function, horizon: int, name: str, period: float | 
         line = _line(steps, values, ROUNDING * float(np.abs(values).max()))
         if line is not None:
             return Known(*line, names=(name,))
-    note = f"period of {period:g} steps in {name}" if period else f"{name} moves along a known path"
-    return whole(key, at, frozenset([float(period)]) if period else None, note)
+    note = f"period of {period:g} steps in {name}" if period else f"known path of {name}"
+    return whole(key, at, frozenset([float(period)]) if period else None, note, settles)
 
 
 def _looked_at(horizon: int) -> Steps:

@@ -223,8 +223,8 @@ def _differenced(weights: dict[int, float], by: int, order: int) -> dict[int, fl
     dense[list(weights)] = list(weights.values())
     for _ in range(order):
         dense[by:] -= dense[:-by].copy()
-    (at,) = np.nonzero(dense)
-    return dict(zip(at.tolist(), dense[at].tolist(), strict=True))
+    (where,) = np.nonzero(dense)
+    return dict(zip(where.tolist(), dense[where].tolist(), strict=True))
 
 
 def _seasons_ago(key: Season, by: int) -> Linear:

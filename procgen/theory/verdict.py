@@ -33,6 +33,8 @@ CYCLES = "cyclostationary"
 WEAK = "weakly stationary"
 STRICT = "strictly stationary"
 ORDER = (INFINITE, GROWS, VARIES, SETTLES, MEAN, CYCLES, WEAK, STRICT)
+LEAVES = "leaves from a given past and forgets it"
+LEAVES_VARIANCE = "leaves from a given variance and forgets it"
 UNIT_ROOT = 1e-9  # a root nearer to the unit circle than this counts as on it
 
 
@@ -85,8 +87,10 @@ def judge(x: Expression) -> Stationarity:
 
 def _mean(findings: _Findings, mean: Known) -> None:
     try:
-        for note in mean.movement(findings.space.horizon).notes:
-            findings.say(MEAN, note)
+        moving = mean.movement(findings.space.horizon)
+        settling = {piece.note for piece in moving.pieces if piece.settles}
+        for note in moving.notes:
+            findings.say(SETTLES if note in settling else MEAN, note)
     except Unknown as unknown:
         findings.notes.append(f"mean unknown: {unknown.reason}")
 
@@ -101,13 +105,13 @@ def _random_parts(findings: _Findings, x: Expression) -> None:
 def _term(findings: _Findings, term: Term) -> None:
     for factor in term.knowns:
         cyclic = factor.periods is not None
-        why = "; ".join(factor.notes) or "a known path"
+        why = "; ".join(factor.notes) or "known as it is"
         if factor.settles:
             findings.say(SETTLES, f"a random part is multiplied by what settles ({why})")
         elif cyclic:
             findings.say(CYCLES, f"a random part is multiplied by a pattern ({why})")
         else:
-            findings.say(VARIES, f"a random part is multiplied by a known path ({why})")
+            findings.say(VARIES, f"a random part is multiplied by what moves ({why})")
     for form in (*term.factors, term.exponent):
         _form(findings, form)
     for source in term.exponent.sources:
@@ -132,6 +136,8 @@ def _form(findings: _Findings, form: Linear) -> None:
 
 def _started(findings: _Findings, key: Key) -> None:
     base = base_of(key)
+    if base.source.kind == GARCH and not base.phi and isinstance(key, At) and not key.delay:
+        return  # it is said of the source itself
     where = findings.space.origins.get(base, base.source.key)
     radius = spectral_radius(base.phi)
     if radius > 1.0 + UNIT_ROOT:
@@ -139,7 +145,7 @@ def _started(findings: _Findings, key: Key) -> None:
     elif radius > 1.0 - UNIT_ROOT:
         findings.say(GROWS, f"unit root in {where}")
     elif base.phi or (isinstance(key, At) and key.delay) or not _constant_path(base.source):
-        findings.say(SETTLES, f"{where} leaves from a given past and forgets it")
+        findings.say(SETTLES, f"{where} {LEAVES}")
 
 
 def _constant_path(source: Source) -> bool:
@@ -171,7 +177,9 @@ def _ingredients(findings: _Findings, ingredients: Iterable[Expression]) -> None
         _random_parts(findings, ingredient)
         moving = ingredient.mean_path
         if moving.periods is None or moving.periods:
-            findings.say(CYCLES if moving.periods else VARIES, "; ".join(moving.notes) or "a known path")
+            verdict = CYCLES if moving.periods else SETTLES if moving.settles else VARIES
+            for note in moving.notes:
+                findings.say(verdict, note)
 
 
 def _heteroskedastic(findings: _Findings, source: Source) -> None:
@@ -183,7 +191,7 @@ def _heteroskedastic(findings: _Findings, source: Source) -> None:
         elif _constant_path(source):
             findings.say(WEAK, f"{name} leaves from its own unconditional variance, known at step 0 only")
         else:
-            findings.say(SETTLES, f"{name} leaves from a given variance and forgets it")
+            findings.say(SETTLES, f"{name} {LEAVES_VARIANCE}")
         return
     if not np.isfinite(source.variance):
         moment = "variance" if source.kind == GARCH else "fourth moment"

@@ -134,3 +134,35 @@ def test_a_variance_without_a_number_is_still_a_verdict():
     known = theory(read_text(text, catalogue(), LAWS))["x"]
     assert known.stationarity.verdict == SETTLES
     assert known.variance([5]) is None and known.reason("variance") == "infinite variance of x.egarch"
+
+
+@pytest.mark.parametrize(
+    ("body", "verdict", "reasons"),
+    [
+        ("{ar: {phi: 0.5, sd: 1, before: {x: [3]}}}", SETTLES, ["x.ar leaves from a given past and forgets it"]),
+        ("{exp: [{ar: {phi: 0.5, sd: 1, before: {x: [3]}}}]}", SETTLES, [
+            "a random part is multiplied by what settles (x.ar leaves from a given past and forgets it)",
+            "x.ar leaves from a given past and forgets it"]),
+        ("{garch: {omega: 1, alpha: 0.1, before: {variance: 1, shocks: 0.5}}}", SETTLES, [
+            "x.garch leaves from a given variance and forgets it"]),
+        ("{hold: {of: [{ar: {phi: 0.5, sd: 1, before: {x: [3]}}}], every: 5}}", SETTLES, [
+            "x.ar leaves from a given past and forgets it", "known path of x.hold", "held for 5 steps in x.hold"]),
+        ("{schedule: {of: [{white_noise: {sd: 1}}], until: 9, then: [{constant: 2}]}}", VARIES, [
+            "a random part is multiplied by what moves (known path of x.schedule)", "known path of x.schedule"]),
+    ],
+)  # fmt: skip
+def test_each_reason_is_said_once(body, verdict, reasons):
+    text = f"procgen: 1\nseed: 5\npaths: 50\ntime: {{steps: 60}}\nseries:\n  x: {body}\n"
+    said = theory(read_text(text, catalogue(), LAWS))["x"].stationarity
+    assert said.verdict == verdict and list(said.reasons) == reasons
+
+
+def test_a_held_series_from_a_given_past_is_read_from_step_0():
+    """Of step 0, 5, 10 of the recursion from 3: means 3 phi^(t + 1), variances (1 - phi^(2t + 2))/(1 - phi^2)."""
+    text = "procgen: 1\nseed: 5\npaths: 50\ntime: {steps: 60}\nseries:\n"
+    text += "  x: {hold: {of: [{ar: {phi: 0.5, sd: 1, before: {x: [3]}}}], every: 5}}\n"
+    held = theory(read_text(text, catalogue(), LAWS))["x"]
+    t = np.array([0, 4, 5, 12])
+    at = t - t % 5
+    np.testing.assert_allclose(held.mean(t), 3 * 0.5 ** (at + 1), rtol=1e-14)
+    np.testing.assert_allclose(held.variance(t), (1 - 0.25 ** (at + 1)) / 0.75, rtol=1e-14)
