@@ -17,6 +17,7 @@ from functools import lru_cache
 
 import numpy as np
 
+from procgen.theory.recursion import recursed
 from procgen.theory.unknown import Unknown
 
 WEAK, HOPELESS = 1e6, 1e12  # condition numbers: beyond the first rational numbers are used while that is quick
@@ -38,7 +39,7 @@ def companion(phi: tuple[float, ...], size: int | None = None) -> np.ndarray:
 
 
 class PowerSeries:
-    """Coefficients of numerator(z) / phi(z) at any lags >= 0, by recursion (scipy.signal.lfilter)."""
+    """Coefficients of numerator(z) / phi(z) at any lags >= 0, by recursion."""
 
     def __init__(self, numerator: np.ndarray, phi: tuple[float, ...]):
         self.numerator, self.phi = numerator, phi
@@ -47,12 +48,10 @@ class PowerSeries:
     def upto(self, count: int) -> np.ndarray:
         """The first `count` coefficients (count <= LONGEST_RECURSION)."""
         if len(self._values) < count:
-            from scipy.signal import lfilter
-
-            impulse = np.zeros(max(count, 64, min(2 * len(self._values), LONGEST_RECURSION)))
-            impulse[0] = 1.0
-            with np.errstate(under="ignore", over="ignore", invalid="ignore"):
-                self._values = lfilter(self.numerator, polynomial(self.phi), impulse)
+            coming = np.zeros(max(count, 64, min(2 * len(self._values), LONGEST_RECURSION)))
+            head = self.numerator[: len(coming)]
+            coming[: len(head)] = head
+            self._values = recursed(self.phi, coming)
         return self._values[:count]
 
     def at(self, lags: np.ndarray) -> np.ndarray:

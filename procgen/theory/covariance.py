@@ -101,12 +101,13 @@ def _shifts(a: dict[int, float], b: dict[int, float]) -> tuple[np.ndarray, np.nd
     first, second = np.zeros(max(a) - low_a + 1), np.zeros(max(b) - low_b + 1)
     first[np.array(list(a)) - low_a] = list(a.values())
     second[np.array(list(b)) - low_b] = list(b.values())
-    weights = _convolved(second, first[::-1])  # index k is the shift k - (len(first) - 1) + low_b - low_a
+    weights = convolved(second, first[::-1])  # index k is the shift k - (len(first) - 1) + low_b - low_a
     (at,) = np.nonzero(weights)
     return at + (low_b - low_a - (len(first) - 1)), weights[at]
 
 
-def _convolved(a: np.ndarray, b: np.ndarray) -> np.ndarray:
+def convolved(a: np.ndarray, b: np.ndarray) -> np.ndarray:
+    """The product of two polynomials; by Fourier transforms where they are long."""
     if len(a) * len(b) <= DIRECT:
         return np.convolve(a, b)
     from scipy.signal import fftconvolve

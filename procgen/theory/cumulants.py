@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from procgen.theory.covariance import DIRECT, covariance
+from procgen.theory.covariance import convolved, covariance
 from procgen.theory.garch import Garch
 from procgen.theory.linear import At, Base, Linear
 from procgen.theory.sources import Source, Space
@@ -65,12 +65,10 @@ def _in_pairs(weights: np.ndarray) -> bool:
 
 def _quadratic(p: np.ndarray, q: np.ndarray, covariances: np.ndarray) -> float:
     """Sum over u, v of p(u) q(v) c(|u - v|)."""
-    from scipy.signal import correlate
-
     (u,), (v,) = np.nonzero(p), np.nonzero(q)
     if len(u) * len(v) <= SPARSE:  # few shocks, perhaps far apart
         return float(p[u] @ covariances[np.abs(u[:, None] - v[None, :])] @ q[v])
-    by_lag = correlate(p, q, method="direct" if len(p) * len(q) <= DIRECT else "fft")
+    by_lag = convolved(p, q[::-1])
     middle = len(q) - 1
     return float(by_lag[middle:] @ covariances[: len(p)] + by_lag[middle - 1 :: -1] @ covariances[1 : len(q)])
 

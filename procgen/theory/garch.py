@@ -23,7 +23,8 @@ from typing import Any
 
 import numpy as np
 
-from procgen.theory.arma import companion, cross_covariance, polynomial
+from procgen.theory.arma import companion, cross_covariance
+from procgen.theory.recursion import recursed
 
 HIGHEST = 64.0  # moments of h are looked at up to this order
 ROOT_TOLERANCE = 1e-10
@@ -163,15 +164,12 @@ class Garch:
         return memory
 
     def _forward(self, count: int) -> np.ndarray:
-        from scipy.signal import lfilter
-
         coming = np.full(count, self.omega)  # omega, and what reaches past step 0 from the given past
         for weights, past in ((self.alpha, self.past_squares), (self.beta, self.past_variances or ())):
             for i, weight in enumerate(weights, start=1):
                 for t in range(min(i, count)):
                     coming[t] += weight * past[t - i]
-        with np.errstate(over="ignore"):
-            return lfilter([1.0], polynomial(self.persistence), coming)
+        return recursed(self.persistence, coming)
 
 
 def expect(law: Any, f: Any) -> float:
