@@ -215,16 +215,9 @@ def _rank(row: Check) -> tuple[int, float]:
 
 
 def headline(rows: Sequence[Check], most: int = 8) -> list[str]:
-    """A line a series that departs, the largest disagreement first; what is wrong with the structure before all."""
+    """A line a series that departs, what explains most first; what is wrong with the structure before all."""
+    from procgen.checks.attribution import departures
     from procgen.checks.words import sentence
 
-    series: dict[tuple[bool, str], dict[str, list[Check]]] = {}
-    for row in sorted(rows, key=_strength):
-        if row.outcome == "departs":
-            series.setdefault((row.kind != "structure", row.series), {}).setdefault(row.kind, []).append(row)
-    lines = [sentence(list(series[key].values())) for key in sorted(series, key=lambda key: key[0])]
+    lines = [sentence(groups) for groups in departures(rows)]
     return lines[:most] + ([f"and {len(lines) - most} more series, see the table"] if len(lines) > most else [])
-
-
-def _strength(row: Check) -> float:
-    return -math.inf if row.log_p is None else row.log_p

@@ -9,12 +9,23 @@ if TYPE_CHECKING:
     from procgen.checks.verdict import Check
 
 _SAYS = {
-    "level": "level: the mean is not the one stated",
-    "spread": "spread: the variance is not the one stated",
-    "memory": "memory: values depend on earlier ones otherwise than stated",
-    "clustering": "clustering: calm and wild stretches follow each other otherwise than stated",
-    "law": "law: the shape of the distribution is not the one stated",
-    "dependence": "dependence: paths or series hang together otherwise than stated",
+    "level": "the mean is {} stated",
+    "spread": "the variance is {} stated",
+    "memory": "values follow earlier ones otherwise than stated",
+    "clustering": "calm and wild stretches follow each other otherwise than stated",
+    "law": "the shape of the distribution is not the one stated",
+    "dependence": "paths or series hang together otherwise than stated",
+}
+_MORE_LESS = {"level": ("higher than", "lower than"), "spread": ("larger than", "smaller than")}
+_SIGNED = ("mean", "variance", "level score", "spread score")  # how the checks end whose sign says more or less
+_WHOLE = {
+    "shocks: level by step": "the shocks' mean at a step is off by {} of their sd, root mean square",
+    "shocks: level by phase": "the shocks' mean at a phase of the season is off by {} of their sd, root mean square",
+    "shocks: spread by step": "the shocks' spread differs from step to step, by {} a shock",
+    "shocks: level by path": "each path keeps a level of its own, by {} of a shock's sd, root mean square",
+    "shocks: spread by path": "each path keeps a spread of its own, by {} a shock",
+    "shocks: shape of the law": "the shocks' density is off by {}, root mean square",
+    "shocks: distribution function": "the shocks' distribution function is off by up to {}",
 }
 
 
@@ -37,7 +48,7 @@ def p_text(log_p: float) -> str:
 
 
 def sentence(groups: list[list[Check]]) -> str:
-    """One line for the departures of one series: a group a kind, the strongest first, in groups too."""
+    """One line for the departures of one series: a group a kind, the one that explains most first."""
     first, *others = groups
     top = first[0]
     who = f"{top.series}: " if top.series else ""
@@ -45,13 +56,30 @@ def sentence(groups: list[list[Check]]) -> str:
         return f"{who}structure: {top.note}{_more(first)}"
     if top.what == "values":
         return f"{who}level: {top.note}"
-    where = f" at {top.probe}" if top.probe else ""
     p = f", p {p_text(top.log_p)}" if top.log_p is not None else ""
-    seen = f"{top.what}{where} is {number(top.estimate, 4)}, stated {number(top.theory, 4)}{p}"
     also = ", ".join(group[0].kind for group in others)
-    return f"{who}{_SAYS[top.kind]} ({seen}){_more(first)}" + (
+    return f"{who}{top.kind}: {_says(top)} ({_seen(top)}{p}){_more(first)}" + (
         f"; also {also}, which may follow from it" if also else ""
     )
+
+
+def _says(top: Check) -> str:
+    """The departure in general, with its direction where the check has one."""
+    way = "not the one"
+    signed = top.what.split(" over ")[0].endswith(_SIGNED) or top.what.startswith("variance of")
+    if signed and top.kind in _MORE_LESS and top.estimate is not None and top.theory is not None:
+        way = _MORE_LESS[top.kind][int(top.estimate < top.theory)]
+    return _SAYS[top.kind].format(way)
+
+
+def _seen(top: Check) -> str:
+    """What was seen, in numbers."""
+    if top.what in _WHOLE and not top.probe.startswith("worst"):
+        return _WHOLE[top.what].format(number(top.estimate, 4))
+    if top.probe.startswith("worst"):
+        return f"{top.what} is off most at {top.probe.removeprefix('worst: ')}, by {number(top.estimate, 4)} se"
+    where = f" at {top.probe}" if top.probe else ""
+    return f"{top.what}{where} is {number(top.estimate, 4)}, stated {number(top.theory, 4)}"
 
 
 def _more(group: list[Check]) -> str:

@@ -118,7 +118,7 @@ def test_headline_names_series_and_kind_the_largest_first():
     ]
     assert Verdict(rows, 0.001).headline == [
         "z: structure: 1 value is not finite, the first at path 3, step 4",
-        "y: level: the mean is not the one stated (mean at step 4 is 0.03, stated 0, p 1e−198)",
-        "x: spread: the variance is not the one stated (shocks: variance at all steps is 0.012, stated 0, p 1e−33); "
+        "y: level: the mean is higher than stated (mean at step 4 is 0.03, stated 0, p 1e−198)",
+        "x: spread: the variance is larger than stated (shocks: variance at all steps is 0.012, stated 0, p 1e−33); "
         "also memory, which may follow from it",
     ]

@@ -20,7 +20,7 @@ def verdict(z=(1.0, 9.0)):
 
 def test_text_says_it_all():
     text = verdict().to_text()
-    assert text.startswith("DEPARTS from what the spec states\n  load: spread: the variance is not the one stated")
+    assert text.startswith("DEPARTS from what the spec states\n  load: spread: the variance is larger than stated")
     assert "2,000 paths × 500 steps; 3 checks: 1 agrees, 1 departs, 1 untestable" in text
     assert "a shock variance off by a factor of 1 ± 0.0048" in text  # (3.4808 + 1.2816) / 1000 at level 0.001 / 2
     assert "x<script>: covariance: no <variance> & more" in text

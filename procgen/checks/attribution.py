@@ -1,0 +1,134 @@
+"""Which departures are told first: of all that departs, what explains the most, before what follows from it.
+
+The measure of a departure is its gain: the log-likelihood that is gained, in units of nats, when it alone is allowed
+for. For one statistic that is close to −log p, but for products of shocks: a wrong level or spread makes those as
+large as one likes, so that their gain is counted against the size which the shocks are seen to have.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping, Sequence
+from typing import TYPE_CHECKING
+
+if TYPE_CHECKING:
+    from procgen.checks.verdict import Check
+
+_WHOLE_LAW = ("law", "shocks: distribution function", "shocks: within the law's ends", "share below")
+_PRODUCTS = ("shocks: autocorrelation", "shocks: neighbouring paths", "shocks: correlation between series")
+_SIZES = ("shocks: variance", "shocks: spread score", "shocks: spread by step")
+_SCORE = 1.5  # a spread score of s is a log variance of about 1.5 s, for laws from Laplace to normal
+_LIKE = 0.5  # share of the shocks' log variance that the values' must show to be called a matter of spread
+
+Groups = list[list["Check"]]
+
+
+def departures(rows: Sequence[Check]) -> list[Groups]:
+    """What departs, by series and then by kind, in the order in which it is to be told.
+
+    What is wrong with the structure comes before all, then the series with the largest gain; in each series the kind
+    that explains most comes first, and the kinds that may follow from it after.
+    """
+    series: dict[str, list[Check]] = {}
+    for row in rows:
+        series.setdefault(row.series, []).append(row)
+    sizes = {name: _size(mine) for name, mine in series.items()}
+    found = [_of_series(mine, sizes) for mine in series.values() if any(row.outcome == "departs" for row in mine)]
+    found = [part for groups in found for part in _structure_apart(groups)]
+    return sorted(found, key=lambda groups: (groups[0][0].kind != "structure", -_largest(groups, sizes)))
+
+
+def _largest(groups: Groups, sizes: Mapping[str, float]) -> float:
+    return max(_gain(group[0], sizes) for group in groups)
+
+
+def _structure_apart(groups: Groups) -> list[Groups]:
+    facts = [group for group in groups if group[0].kind == "structure"]
+    rest = [group for group in groups if group[0].kind != "structure"]
+    return [part for part in (facts, rest) if part]
+
+
+def _of_series(rows: Sequence[Check], sizes: Mapping[str, float]) -> Groups:
+    kinds: dict[str, list[Check]] = {}
+    for row in sorted(rows, key=lambda row: -_gain(row, sizes)):
+        if row.outcome == "departs":
+            kinds.setdefault(row.kind, []).append(row)
+    order = sorted(kinds, key=lambda kind: (_follows(kind, kinds), -_gain(kinds[kind][0], sizes)))
+    if order:
+        behind = _BEHIND.get(order[0], _nothing)(rows, kinds)
+        order = [kind for kind in (behind, *(kind for kind in order if kind != behind)) if kind]
+    return [kinds[kind] for kind in order]
+
+
+def _gain(row: Check, sizes: Mapping[str, float]) -> float:
+    if row.log_p is None:
+        return math.inf
+    if row.what in _PRODUCTS:
+        return -row.log_p / math.prod(max(1.0, sizes.get(name, 1.0)) for name in row.series.split(" ~ "))
+    return -row.log_p
+
+
+def _size(rows: Sequence[Check]) -> float:
+    """Mean square of the shocks of a series, 1 when it is as stated."""
+    seen = {row.what: row.estimate or 0.0 for row in rows if row.what in ("shocks: variance", "shocks: mean")}
+    return seen.get("shocks: variance", 1.0) + seen.get("shocks: mean", 0.0) ** 2
+
+
+def _follows(kind: str, kinds: Mapping[str, list[Check]]) -> bool:
+    """A test of the whole law sees a wrong mean or variance too: it says nothing of the shape where one is found."""
+    whole = all(row.what.startswith(_WHOLE_LAW) for row in kinds[kind])
+    return kind == "law" and whole and not kinds.keys().isdisjoint(("level", "spread"))
+
+
+def _nothing(rows: Sequence[Check], kinds: Mapping[str, list[Check]]) -> str | None:
+    return None
+
+
+def _behind_spread(rows: Sequence[Check], kinds: Mapping[str, list[Check]]) -> str | None:
+    """What is behind shocks of another size in a series whose own variance is as stated.
+
+    The shocks are what is left when memory, or the conditional variance, is taken away. Where too much or too little
+    is left of values that spread as they should, it is memory or clustering that is not as stated.
+    """
+    shocks = [row for row in rows if row.what in _SIZES and row.outcome == "departs"]
+    stated = {row.theory for row in rows if row.what == "variance"}
+    behind = max(("memory", "clustering"), key=lambda kind: _top(kinds, kind))
+    moved = _moved(rows, "variance over steps")
+    if not shocks or moved is None or not _one_value(stated) or behind not in kinds:
+        return None
+    return behind if abs(moved) < _LIKE * _log_variance(shocks[0]) else None
+
+
+def _behind_memory(rows: Sequence[Check], kinds: Mapping[str, list[Check]]) -> str | None:
+    """Spread, where the slope on earlier steps has changed only because more, or less, of the variance is noise."""
+    variance, slope = _moved(rows, "variance over steps"), _moved(rows, "slope over steps")
+    if "spread" not in kinds or variance is None or slope is None:
+        return None
+    return "spread" if abs(slope + variance) < _LIKE * abs(variance) else None
+
+
+_BEHIND = {"spread": _behind_spread, "memory": _behind_memory}
+
+
+def _moved(rows: Sequence[Check], what: str) -> float | None:
+    """Logarithm of estimate over theory of the first check of this name."""
+    for row in rows:
+        if row.what == what and row.theory and row.estimate and row.estimate / row.theory > 0:
+            return math.log(row.estimate / row.theory)
+    return None
+
+
+def _one_value(numbers: set[float | None]) -> bool:
+    known = [x for x in numbers if x is not None]
+    return bool(known) and max(known) - min(known) <= 1e-6 * max(known)
+
+
+def _top(kinds: Mapping[str, list[Check]], kind: str) -> float:
+    return -(kinds[kind][0].log_p or 0.0) if kind in kinds else 0.0
+
+
+def _log_variance(row: Check) -> float:
+    """How far the shocks' variance is from the stated one, as a logarithm."""
+    if row.what == "shocks: variance":
+        return abs(math.log(max(row.estimate or 0.0, 1e-300)))
+    return _SCORE * abs(row.estimate or 0.0)
