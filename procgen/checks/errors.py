@@ -89,6 +89,6 @@ def _check(
         return Check(series, what, probe, kind, theory, outcome="reported", note=note)
     sample = Sample.from_powers(n, powers.sums[:, k].tolist())
     if not highest > 3 * order or sample.sd == 0.0:
-        note = f"moments exist only below order {highest:g}: no central limit theorem reaches far enough"
+        note = f"moments are known to exist only below order {highest:g}: no central limit theorem reaches far enough"
         return Check(series, what, probe, kind, theory, theory + sample.mean, outcome="untestable", note=note)
     return Check.of(series, what, probe, kind, sample_mean(sample, theory))

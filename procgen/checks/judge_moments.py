@@ -98,7 +98,7 @@ def _limit(
         return Check(plan.name, what, probe, kind, theory, outcome="untestable", note=plan.reason("covariance"))
     if not plan.highest > 3 * order:
         bound = (
-            f"moments exist only below order {plan.highest:g}"
+            f"moments are known to exist only below order {plan.highest:g}"
             if plan.highest
             else "how many moments exist is not known"
         )

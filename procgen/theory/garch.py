@@ -24,6 +24,7 @@ from typing import Any
 import numpy as np
 
 from procgen.theory.arma import companion, cross_covariance
+from procgen.theory.powers import existing_orders
 from procgen.theory.recursion import recursed
 
 HIGHEST = 64.0  # moments of h are looked at up to this order
@@ -119,26 +120,34 @@ class Garch:
         return None, "alpha + beta sums to more than 1: at this order the top Lyapunov exponent has no closed form"
 
     @cached_property
-    def highest_moment(self) -> float:
-        """The order below which moments are known to exist: the tail index at order (1,1), else a lower bound.
+    def orders(self) -> tuple[float, float]:
+        """All moments below the first order exist, none from the second on (inf: not known); equal where exact.
 
-        At order (1,1) it is twice the s with E (beta + alpha z^2)^s = 1 (Kesten 1973; Mikosch & Starica 2000).
+        They are of the stationary law, and of what a given past settles to: until then each step has the moments of
+        the law of z, but they grow without a bound. At order (1,1) both are twice the s with E (beta + alpha z^2)^s = 1
+        (Kesten 1973; Mikosch & Starica 2000); at higher orders every even moment is decided (`theory.powers`).
         """
+        law = float(self.law.highest_moment)
+        if not any(self.alpha):
+            return law, law
         if len(self.alpha) == 1 and len(self.beta) <= 1:
             a, b = self.alpha[0], self.beta[0] if self.beta else 0.0
-            if a == 0.0:
-                return float(self.law.highest_moment)
-            return min(tail_index(self.law, lambda z: b + a * z * z), float(self.law.highest_moment))
-        if np.isfinite(self.shock_variance):
-            return float(np.nextafter(4.0, 5.0))
-        return float(np.nextafter(2.0, 3.0)) if np.isfinite(self.variance) else 0.0
+            index = min(tail_index(self.law, lambda z: b + a * z * z), law)
+            return index, index if index < 2.0 * HIGHEST else law
+        if self.total >= 1.0:  # at 1 the growth of E h^s is 0 at s = 0 and s = 1, and below 0 between
+            return 2.0 if self.total == 1.0 else 0.0, 2.0
+        exist, end = existing_orders(self.alpha, self.beta, lambda k: self.law.moment(2 * k))
+        return exist, min(end, law)
+
+    @property
+    def highest_moment(self) -> float:
+        """The order below which moments are known to exist."""
+        return self.orders[0]
 
     @property
     def power_tailed(self) -> bool:
         """Whether its tails are known to be power laws, so that its exponential has no finite mean."""
-        if np.isfinite(float(self.law.highest_moment)):
-            return True
-        return len(self.alpha) == 1 and len(self.beta) <= 1 and self.highest_moment < 2.0 * HIGHEST
+        return bool(np.isfinite(self.orders[1]))
 
     @property
     def settles(self) -> float:

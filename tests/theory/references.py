@@ -29,6 +29,9 @@ class ReferenceLaw:
         scale = 1.0 / law.std()
         return getattr(stats, self.base)(*self.args, loc=-law.mean() * scale, scale=scale)
 
+    def moment(self, k):
+        return float(self.distribution().moment(k)) if k < self.highest_moment else None
+
     def shocks_from_normals(self, z):
         law = self.distribution()
         return np.where(z < 0, law.ppf(stats.norm.cdf(z)), law.isf(stats.norm.sf(z)))
