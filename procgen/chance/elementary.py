@@ -77,6 +77,16 @@ def log1p(x, out: np.ndarray | None = None) -> np.ndarray:
     return blockwise(_log1p, x, out)
 
 
+def lost(x) -> np.ndarray:
+    """1 - e**-x, elementwise, for x >= 0, without cancelling: the share that is lost at a rate x."""
+    x = np.asarray(x, np.float64)
+    small = np.minimum(x, 0.5)
+    total = np.ones_like(small)
+    for n in range(20, 1, -1):  # x (1 - x/2 (1 - x/3 (1 - ...)))
+        total = 1.0 - small / n * total
+    return np.where(x >= 0.5, 1.0 - exp(-x), small * total)
+
+
 def sin_turns(x, out: np.ndarray | None = None) -> np.ndarray:
     """sin(2 pi x), elementwise, within 2 ulp; exact at multiples of a quarter; nan for nan and infinities."""
     return blockwise(_sin_turns, x, out)

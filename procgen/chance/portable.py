@@ -4,7 +4,7 @@ Only what IEEE 754 rounds correctly is used, in a fixed order. NumPy's and the C
 differ between processors by a last bit, BLAS and reductions by the order of their terms.
 """
 
-from procgen.chance.elementary import cos_turns, exp, log, log1p, sin_turns
+from procgen.chance.elementary import cos_turns, exp, log, log1p, lost, sin_turns
 from procgen.chance.matrices import cholesky, matmul, sum_doubling
 from procgen.chance.normal import normal_quantile, normal_tail
 
@@ -14,6 +14,7 @@ __all__ = [
     "exp",
     "log",
     "log1p",
+    "lost",
     "matmul",
     "normal_quantile",
     "normal_tail",

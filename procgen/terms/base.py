@@ -97,6 +97,7 @@ class Term:
     burns_in: ClassVar[bool] = False  # whether `begin` reads its inputs from the first row on, a few rows at a time
     portable: ClassVar[bool] = True
     why_not_portable: ClassVar[str] = ""
+    longest: ClassVar[int | None] = None  # the most steps it can be drawn for; None when any number
     no_past: ClassVar[str] = ""  # why there is less before step 0 than is read, and what to do; where not `before`
 
     address: str = ""  # series.label, set when the term takes its place in a graph

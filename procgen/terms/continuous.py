@@ -6,7 +6,7 @@ from typing import ClassVar
 
 import numpy as np
 
-from procgen.chance.portable import exp
+from procgen.chance.portable import exp, lost
 from procgen.spec.declare import Parameter, Real, Reals, Record
 from procgen.terms.arima import Integrated
 from procgen.terms.arma import Arma
@@ -62,7 +62,7 @@ class OrnsteinUhlenbeck(Integrated):
         self.level = float(self.values["mean"])
 
     def shock_sd(self):
-        share = _lost(2.0 * self.rate)  # 1 − φ²
+        share = float(lost(2.0 * self.rate))  # 1 − φ²
         if self.sd is not None:
             return self.sd * float(np.sqrt(share / (2.0 * self.rate)))
         return self.total_sd * float(np.sqrt(share))
@@ -86,13 +86,3 @@ class OrnsteinUhlenbeck(Integrated):
 def _kept(rate):
     """exp(−rate), the share of a distance that is left after a step."""
     return float(exp(np.array([-rate]))[0])
-
-
-def _lost(x):
-    """1 − exp(−x) for x > 0, without cancelling: by its series where x is small."""
-    if x >= 0.5:
-        return 1.0 - _kept(x)
-    total = 1.0
-    for n in range(20, 1, -1):  # x(1 − x/2(1 − x/3(1 − …)))
-        total = 1.0 - x / n * total
-    return x * total

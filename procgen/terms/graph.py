@@ -171,12 +171,17 @@ class Graph:
             inputs.append(noise)
         inputs += [self._source(draw, owner, entry.label, name) for draw in term.draws()]
         node = self._node(term, name, inputs, entry.place)
-        misfit = term.misfit(inputs)
+        misfit = term.misfit(inputs) or self._too_long(term)
         if misfit:
             raise SpecError((Fault(entry.place, misfit),))
         if kind.takes_shock:
             self.filters[id(inputs[-1])] = node
         return node
+
+    def _too_long(self, term: Term) -> str | None:
+        if term.longest is None or self.spec.time.steps <= term.longest:
+            return None
+        return f"expected at most {term.longest:,} steps with {term.kind}, got {self.spec.time.steps:,}; ask for fewer"
 
     def _shock(self, entry: Entry, term: Term, owner: str) -> Node:
         if entry.shock is not None:

@@ -12,6 +12,7 @@ from procgen.theory import known, markov
 from procgen.theory.arma import PowerSeries, spectral_radius
 from procgen.theory.chains import States, Switching
 from procgen.theory.expression import Expression, opaque, product
+from procgen.theory.fractional import Filtered, FractionalNoise, GaussianNoise, StationaryGaussian
 from procgen.theory.garch import Garch
 from procgen.theory.known import Known
 from procgen.theory.laws import is_gaussian
@@ -171,10 +172,20 @@ class Axis:
         walk = drifting.integrate(float(start))
         return Expression(self.space, walk.mean_path, walk.linear, walk.terms, noise.outputs)
 
+    def fractional(self, noise: Expression, d: float, phi: Sequence[float], theta: Sequence[float]) -> Expression:
+        """phi(B) x = theta(B) (1 - B)^-d of a Gaussian white noise, stationary."""
+        (source,) = noise.sources
+        memory = FractionalNoise(d, source.variance)
+        return self.process(StationaryGaussian(self.name, (noise,), Filtered(memory, phi, theta)))
+
+    def fractional_gaussian(self, noise: Expression, hurst: float, sd: float) -> Expression:
+        """Increments of fractional Brownian motion with standard deviation `sd`, made from a white noise."""
+        return self.process(StationaryGaussian(self.name, (noise,), GaussianNoise(hurst, sd * sd)))
+
     def chain(self, key: str, law: Any, p: float, r: float) -> Expression:
         """0 or 1 by a stationary chain, driven by the stream `key`: 1 with probability p, autocorrelations r^lag."""
         driver = self.source(key, law, 1.0)
-        return self._process(Chain(key, (driver,), p, r), known.constant(p))
+        return self.process(Chain(key, (driver,), p, r), known.constant(p))
 
     def states(
         self, key: str, law: Any, transitions: Any, shares: Any, start: int | None, names: tuple[str, ...]
@@ -184,7 +195,7 @@ class Axis:
         Stationary with the given shares, or from state `start` at step 0.
         """
         chain = States(transitions, shares, start)
-        return markov.number_of_state(self._process, self.source(key, law, 1.0), key, chain, names)
+        return markov.number_of_state(self.process, self.source(key, law, 1.0), key, chain, names)
 
     def switching(self, key: str, law: Any, spreads: Sequence[float], *chain: Any) -> Expression:
         """Shocks with a spread for each state of a chain of their own, given as for `states`; filters take them too."""
@@ -219,7 +230,7 @@ class Axis:
             path = x.mean_path
         elif x.mean_path.value is None:
             path = known.observed(("held", self.name), path.at, self.horizon, self.name, settles=x.mean_path.settles)
-        return self._process(Held(self.name, x, step_of, says), path) if x.sources else Expression(self.space, path)
+        return self.process(Held(self.name, x, step_of, says), path) if x.sources else Expression(self.space, path)
 
     def hinge(self, x: Expression) -> Expression:
         """max(x, 0): closed where x is known or Gaussian."""
@@ -240,17 +251,18 @@ class Axis:
             return self._given_up(x, "a function with a bend of what is not Gaussian has no closed moments")
         steady = judge(x).covariance_stationary
         if steady and x.mean_path.value is not None:
-            return self._process(process, known.constant(float(process.mean(np.zeros(1, np.int64))[0])))
+            return self.process(process, known.constant(float(process.mean(np.zeros(1, np.int64))[0])))
         periods, note = x.mean_path.periods if steady else None, f"the mean moves in {self.name}"
         key = ("mean", self.name, len(self._processes))
-        return self._process(process, known.whole(key, process.mean, periods, note))
+        return self.process(process, known.whole(key, process.mean, periods, note))
 
-    def _process(self, process: Process, mean: Known) -> Expression:
+    def process(self, process: Process, mean: Known | None = None) -> Expression:
+        """A process with a memory of its own around its mean (0 when absent)."""
         depends = frozenset(root for x in process.ingredients for source in x.sources for root in roots(source))
         key = f"process {len(self._processes)} of {process.name}"
         source = Source(key, PROCESS, np.nan, detail=process, depends=depends)
         self._processes.append(source)
-        return Expression(self.space, mean, Linear({At(self._base(source, (), False), 0): 1.0}))
+        return Expression(self.space, mean or known.constant(0.0), Linear({At(self._base(source, (), False), 0): 1.0}))
 
     def product(self, expressions: Sequence[Expression]) -> Expression:
         """The product of series."""
@@ -301,7 +313,7 @@ class Axis:
             return self._started_variance(source, noise)
         if not np.isfinite(process.variance):
             return opaque(self.space, (noise,), f"infinite mean of the variance of {source.key}")
-        return self._process(ConditionalVariance(source, noise), known.constant(process.variance))
+        return self.process(ConditionalVariance(source, noise), known.constant(process.variance))
 
     def _started_variance(self, source: Source, noise: Expression) -> Expression:
         key, process = source.key, source.detail

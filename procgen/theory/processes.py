@@ -27,6 +27,7 @@ class Process:
     """One process: what it is made of (`ingredients`, expressions), its moments, and what verdicts it adds."""
 
     discrete = False  # whether it takes few values
+    gaussian = False  # whether its values at any steps are jointly Gaussian
 
     def __init__(self, name: str, ingredients: tuple[Any, ...], says: tuple[tuple[str, str], ...] = ()):
         self.name, self.ingredients, self.says = name, ingredients, says

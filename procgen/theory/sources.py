@@ -42,7 +42,7 @@ class Source:
 
     @property
     def gaussian(self) -> bool:
-        return self.kind == IID and bool(self.law.gaussian)
+        return self.detail.gaussian if self.kind == PROCESS else self.kind == IID and bool(self.law.gaussian)
 
     @property
     def power_tailed(self) -> bool:

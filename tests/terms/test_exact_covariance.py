@@ -36,6 +36,10 @@ CASES = {
     "difference of walk": "  x: {difference: {of: [{random_walk: {sd: 1, drift: 2}}], by: 3}}",
     "difference of an integral": "  x: {difference: {of: [{integrate: [{ma: {theta: 0.3, sd: 1}}]}], by: 2, order: 2}}",
     "lag of an integral": "  x: {lag: {of: [{integrate: [{ar: {phi: 0.5, sd: 1}}]}], by: 3}}",
+    "long memory": "  x: {arfima: {d: 0.4, sd: 2}}",
+    "long memory, filtered": "  x: {arfima: {d: 0.3, phi: [0.5, 0.2], theta: 0.4, total_sd: 2}}",
+    "rough": "  x: {arfima: {d: -0.45, theta: [0.3, -0.2], sd: 1}}",
+    "fractional Gaussian noise": "  x: {fractional_gaussian_noise: {hurst: 0.8, sd: 3}}",
     "two series sharing": "  x: [{use: w, times: 2}, {white_noise: {sd: 1}}]\n  y: {lag: {of: [{use: w}], by: 4}}",
     "lead and lag of oneself": "  x: [{use: w}, {lag: {of: [{use: w}], by: 1}, times: -0.5}]\n  y: {use: w}",
 }

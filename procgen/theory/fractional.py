@@ -1,0 +1,123 @@
+"""Gaussian series with a long memory: their covariances fall like a power of the lag.
+
+Hosking (1981), Biometrika 68, 165-176, for fractional differences; Mandelbrot & Van Ness (1968), SIAM Review 10,
+422-437, for fractional Gaussian noise; an ARMA filter of the first as the convolution of both autocovariances
+(Doornik & Ooms 2003, Comput. Stat. Data Anal. 42, 333-348).
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from functools import cached_property
+from typing import Any
+
+import numpy as np
+
+from procgen.theory.arma import cross_covariance
+from procgen.theory.processes import Process, Steps
+from procgen.theory.unknown import Unknown
+
+FORGOTTEN = 1e-17
+LONGEST = 1 << 20  # lags of an ARMA filter's memory
+FAR = 64  # beyond this lag the asymptotic series of a ratio of gamma functions is exact to rounding
+SMOOTH = 12  # beyond this lag the series of a second difference of a power is
+_ODD_BERNOULLI = ((0.0, 0.5, -1.5, 1.0), (0.0, -1 / 6, 0.0, 5 / 3, -2.5, 1.0), (0, 1 / 6, 0, -7 / 6, 0, 3.5, -3.5, 1))
+
+
+class StationaryGaussian(Process):
+    """A Gaussian stationary series with mean 0 and a known autocovariance."""
+
+    gaussian = True
+
+    def __init__(self, name: str, ingredients: tuple[Any, ...], autocovariance: Any):
+        super().__init__(name, ingredients)
+        self.autocovariance = autocovariance
+
+    def covariance(self, t: Steps, s: Steps) -> np.ndarray:
+        return self.autocovariance(np.abs(np.asarray(t) - np.asarray(s)))
+
+    def marginal(self, step: int) -> Any:
+        from scipy.stats import norm
+
+        return norm(0.0, math.sqrt(float(self.autocovariance(np.zeros(1, np.int64))[0])))
+
+
+class FractionalNoise:
+    """Autocovariance of (1 - B)^-d of white noise of a variance: gamma(k) = gamma(k - 1) (k - 1 + d) / (k - d)."""
+
+    def __init__(self, d: float, variance: float = 1.0):
+        self.d, self.variance = d, variance * math.exp(math.lgamma(1.0 - 2.0 * d) - 2.0 * math.lgamma(1.0 - d))
+
+    @cached_property
+    def _near(self) -> np.ndarray:
+        k = np.arange(1.0, FAR + 1.0)
+        return self.variance * np.concatenate([[1.0], np.cumprod((k - 1.0 + self.d) / (k - self.d))])
+
+    def __call__(self, lags: np.ndarray) -> np.ndarray:
+        lags = np.asarray(lags, np.int64)
+        near = self._near[np.minimum(lags, FAR)]
+        if not (lags > FAR).any():
+            return near
+        far = np.maximum(lags, FAR).astype(float)
+        return np.where(lags > FAR, self._near[FAR] * np.exp(self._log_ratio(far) - self._log_ratio(float(FAR))), near)
+
+    def _log_ratio(self, k: Any) -> Any:
+        """log Gamma(k + d) / Gamma(k + 1 - d), by Stirling's series; even orders cancel (Tricomi & Erdelyi 1951)."""
+        total = (2.0 * self.d - 1.0) * np.log(k)
+        for n, bernoulli in zip((3, 5, 7), _ODD_BERNOULLI, strict=True):
+            at = sum(c * self.d**i for i, c in enumerate(bernoulli))
+            total = total - 2.0 * at / (n * (n - 1) * k ** (n - 1))
+        return total
+
+
+class GaussianNoise:
+    """Autocovariance of fractional Gaussian noise: variance (|k + 1|^2H - 2 |k|^2H + |k - 1|^2H) / 2."""
+
+    def __init__(self, hurst: float, variance: float = 1.0):
+        self.hurst, self.variance = hurst, variance
+
+    def __call__(self, lags: np.ndarray) -> np.ndarray:
+        lags = np.asarray(lags, np.int64)
+        k, power = lags.astype(float), 2.0 * self.hurst
+        near = (np.abs(k + 1) ** power - 2.0 * k**power + np.abs(k - 1) ** power) / 2.0
+        far, series = np.maximum(k, SMOOTH), np.zeros(k.shape)
+        term = np.full(k.shape, power * (power - 1.0) / 2.0)
+        for n in range(2, 16, 2):  # sum of binomial(2H, n) k^(2H - n), n even: nothing cancels
+            series = series + term * far ** (power - n)
+            term = term * (power - n) * (power - n - 1) / ((n + 1) * (n + 2))
+        return self.variance * np.where(lags > SMOOTH, series, near)
+
+
+class Filtered:
+    """Autocovariance of an ARMA filter theta(B) / phi(B) of a stationary series."""
+
+    def __init__(self, noise: Any, phi: Sequence[float], theta: Sequence[float]):
+        self.noise, self.phi, self.theta = noise, tuple(phi), tuple(theta)
+
+    @cached_property
+    def _weights(self) -> np.ndarray:
+        """Autocovariances of the filter of unit white noise at lags 0, 1, ... until they are forgotten."""
+        gamma, tail = cross_covariance(self.phi, self.phi), np.array([1.0, *self.theta])
+        shifts = np.convolve(tail, tail[::-1])
+        reach = np.arange(len(shifts)) - (len(tail) - 1)
+        count = 64
+        while count <= LONGEST:
+            lags = np.arange(count)
+            values = sum(c * gamma(lags + by) for c, by in zip(shifts.tolist(), reach.tolist(), strict=True))
+            values = np.asarray(values, float)
+            if np.abs(values[count // 2 :]).max() <= FORGOTTEN * values[0]:
+                return values
+            count *= 2
+        raise Unknown("its ARMA part forgets too slowly to add up its covariances")
+
+    def __call__(self, lags: np.ndarray) -> np.ndarray:
+        weights = self._weights
+        distinct, which = np.unique(np.asarray(lags, np.int64), return_inverse=True)
+        by = np.arange(1, len(weights))
+        values = [
+            weights[0] * float(self.noise(np.array([k]))[0])
+            + float(weights[1:] @ (self.noise(np.abs(k - by)) + self.noise(k + by)))
+            for k in distinct.tolist()
+        ]
+        return np.array(values)[which].reshape(np.shape(lags))

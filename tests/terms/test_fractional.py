@@ -1,0 +1,163 @@
+"""Long memory: published moments, an independent reference for the weights, and what the drawn values are made of."""
+
+import mpmath
+import numpy as np
+import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+from scipy.linalg import cholesky, toeplitz
+
+from procgen.chance.kernel import available, compiling
+from procgen.spec.model import SpecError
+from procgen.terms.fractional import modes_of, predictors_of
+from procgen.theory import theory
+from procgen.theory.fractional import Filtered, FractionalNoise, GaussianNoise
+
+from .helpers import draw, graph_of
+
+LAGS = np.array([0, 1, 2, 3, 10, 100])
+
+
+def known(body, steps=50):
+    graph = graph_of(f"  x: {body}", steps=steps)
+    return theory(graph.spec, graph)["x"]
+
+
+# Hosking (1981), Biometrika 68, 165-176, theorem 1 (formulas from memory, values computed from them to 12 digits).
+@pytest.mark.parametrize(
+    ("d", "variance", "correlations"),
+    [
+        (0.2, 1.0986855396, {1: 0.25, 2: 0.1666666667, 3: 0.130952381, 10: 0.0636908121, 100: 0.0160009393}),
+        (0.3, 1.31645606213, {1: 0.4285714286, 2: 0.3277310924, 10: 0.1727163616, 100: 0.0687691372}),
+        (0.4, 2.0700983253, {1: 0.6666666667, 10: 0.4235681566}),
+        (-0.3, 1.10933180138, {1: -0.2307692308, 10: -0.0052155495}),
+    ],
+)
+def test_fractional_differences_have_the_published_moments(d, variance, correlations):
+    x = known(f"{{arfima: {{d: {d}, sd: 1}}}}", 200)
+    assert x.variance([0])[0] == pytest.approx(variance, rel=1e-10)
+    found = x.autocorrelation(list(correlations))
+    np.testing.assert_allclose(found, list(correlations.values()), rtol=0, atol=1e-10)
+
+
+# Hosking (1981), lemma 1, and 8.6: gamma(0) (1 + theta^2 + 2 theta rho(1)); values computed from the formulas.
+@pytest.mark.parametrize(
+    ("body", "variance", "correlations"),
+    [
+        ("phi: 0.5", 2.03753844803, {1: 0.710778008549, 2: 0.5073340256, 3: 0.3778163918, 10: 0.1413248169}),
+        ("theta: 0.5", 1.64802830941, {1: 0.5972222222, 2: 0.2658730159}),
+    ],
+)
+def test_with_an_arma_part_too(body, variance, correlations):
+    x = known(f"{{arfima: {{d: 0.2, {body}, sd: 1}}}}")
+    assert x.variance([7])[0] == pytest.approx(variance, rel=1e-10)
+    np.testing.assert_allclose(x.autocorrelation(list(correlations)), list(correlations.values()), atol=1e-10)
+
+
+# Mandelbrot & Van Ness (1968); Beran (1994), ch. 2: the autocorrelations at lags 1, 2, 3.
+@pytest.mark.parametrize(
+    ("hurst", "correlations"),
+    [
+        (0.7, [0.3195079108, 0.1887525393, 0.1461734422]),
+        (0.8, [0.5157165665, 0.3683399344]),
+        (0.3, [-0.2421417167, -0.049125544]),
+    ],
+)
+def test_fractional_gaussian_noise_has_the_published_correlations(hurst, correlations):
+    x = known(f"{{fractional_gaussian_noise: {{hurst: {hurst}, sd: 3}}}}")
+    np.testing.assert_allclose(x.autocorrelation(range(1, len(correlations) + 1)), correlations, atol=1e-10)
+    n = np.arange(50)
+    sums = sum(x.covariance(n, np.full(50, s)).sum() for s in range(50))
+    assert sums == pytest.approx(9 * 50 ** (2 * hurst), rel=1e-12)  # partial sums have the variance n^2H
+
+
+@settings(max_examples=25, deadline=None, derandomize=True)
+@given(st.floats(-0.49, 0.499).filter(lambda d: abs(d) > 1e-3), st.integers(0, 10**9))
+def test_autocovariances_against_many_digits(d, lag):
+    """Gamma functions by mpmath, 40 digits."""
+    with mpmath.workdps(40):
+        exact = mpmath.gamma(1 - 2 * mpmath.mpf(d)) / (mpmath.gamma(1 - mpmath.mpf(d)) * mpmath.gamma(d))
+        exact *= mpmath.gammaprod([lag + mpmath.mpf(d)], [lag + 1 - mpmath.mpf(d)])
+        assert float(FractionalNoise(d)(np.array([lag]))[0] / exact - 1) == pytest.approx(0, abs=1e-12)
+        h = 2 * mpmath.mpf(d + 0.5)
+        noise = (mpmath.mpf(lag + 1) ** h - 2 * mpmath.mpf(lag) ** h + abs(mpmath.mpf(lag - 1)) ** h) / 2
+        assert float(GaussianNoise(d + 0.5)(np.array([lag]))[0] / noise - 1) == pytest.approx(0, abs=1e-10)
+
+
+@settings(max_examples=15, deadline=None, derandomize=True)
+@given(st.floats(-0.49, 0.499), st.floats(0.0, 9.0), st.floats(0.0, 9.0))
+def test_the_modes_have_the_ideal_covariances_at_any_step_and_lag(d, log_step, log_lag):
+    """The stated bound of 1e-11 of the variance, from the modes' own law, up to steps and lags of 1e9."""
+    modes, t, k = modes_of(d), int(10**log_step), int(10**log_lag)
+    rate = -np.log1p(-np.minimum(modes.lost, 1 - 1e-16))
+    both = rate[:, None] + rate[None, :]
+    gained = np.where(both > 0, -np.expm1(-both * t) / np.where(both > 0, -np.expm1(-both), 1.0), t)
+    start = modes.factor @ modes.factor.T
+    w, e = modes.weights, np.exp(-rate * t)
+    found = (w * e * np.exp(-rate * k)) @ start @ (w * e) + (w * np.exp(-rate * k)) @ gained @ w
+    found += (w * np.exp(-rate * (k - 1))).sum() if k else 1.0
+    ideal = FractionalNoise(d)
+    assert abs(found - ideal(np.array([k]))[0]) <= 1e-11 * ideal.variance
+
+
+def test_the_weights_are_those_of_the_binomial_series():
+    """psi_j = Gamma(j + d) / (Gamma(j + 1) Gamma(d)) (Hosking 1981), by mpmath, out to lag 1e9."""
+    for d in (0.45, 0.1, -0.4):
+        modes = modes_of(d)
+        rate = -np.log1p(-np.minimum(modes.lost, 1 - 1e-16))
+        for j in (1, 2, 10, 10**4, 10**9):
+            with mpmath.workdps(30):
+                exact = mpmath.gammaprod([j + mpmath.mpf(d)], [j + 1, mpmath.mpf(d)])
+            assert (modes.weights * np.exp(-rate * (j - 1))).sum() == pytest.approx(float(exact), abs=1e-11)
+
+
+def test_the_predictors_are_the_inverse_of_a_cholesky_factor():
+    """Rows of the factor of SciPy's Toeplitz matrix: best predictors and what they leave."""
+    for hurst in (0.15, 0.6, 0.95):
+        lower = cholesky(toeplitz(GaussianNoise(hurst)(np.arange(120))), lower=True)
+        inverse = np.linalg.inv(lower)
+        for t in (0, 1, 7, 119):
+            weights, spread = predictors_of(hurst).at(t)
+            assert spread == pytest.approx(lower[t, t], rel=1e-10)
+            np.testing.assert_allclose(weights[::-1], -inverse[t, :t] * lower[t, t], rtol=0, atol=1e-10)
+
+
+@pytest.mark.skipif(not available(), reason="the speed extra is not installed")
+def test_compiled_and_plain_draw_the_same_bits_over_many_tiles():
+    graph = graph_of("  x: {arfima: {d: 0.4, phi: 0.5, sd: 1}}\n  y: {fractional_gaussian_noise: {hurst: 0.9, sd: 1}}")
+    plain = draw(graph, 3, 5, [20, 30])
+    with compiling(True):
+        compiled = draw(graph, 3, 5, [7, 43])
+    assert all(np.array_equal(plain[name], compiled[name]) for name in plain)
+
+
+def test_a_filtered_memory_is_the_convolution_of_both():
+    """Against the sum of the squared weights of (1 - B)^-d / (1 - 0.8 B), 200,000 of them, by plain convolution."""
+    d, phi = -0.4, 0.8
+    j = np.arange(1.0, 200_000)
+    memory = np.concatenate([[1.0], np.cumprod((j - 1 + d) / j)])
+    weights = np.convolve(memory, phi ** np.arange(400))[: len(memory)]
+    found = Filtered(FractionalNoise(d), (phi,), ())(np.zeros(1))[0]
+    assert found == pytest.approx((weights**2).sum(), rel=1e-9)
+
+
+@pytest.mark.parametrize(
+    ("body", "message"),
+    [
+        ("{arfima: {d: 0.5, sd: 1}}", "expected a number in (-0.5, 0.5), got 0.5 (d: memory:"),
+        ("{arfima: {d: 0.2, phi: 1.1, sd: 1}}", "expected all roots of 1 − φ₁z − … outside the unit circle"),
+        ("{lag: {of: [{arfima: {d: 0.2, sd: 1}}], by: 1}}", "a long memory has no past that could be drawn"),
+        ("{fractional_gaussian_noise: {hurst: 1, sd: 1}}", "expected a number in (0, 1), got 1 (hurst:"),
+    ],
+)
+def test_refusals_say_what_was_expected(body, message):
+    with pytest.raises(SpecError) as error:
+        graph_of(f"  x: {body}")
+    assert message in str(error.value)
+
+
+def test_the_exact_recursion_refuses_more_steps_than_it_is_for():
+    with pytest.raises(SpecError) as error:
+        graph_of("  x: {fractional_gaussian_noise: {hurst: 0.7, sd: 1}}", steps=10_001)
+    expected = "expected at most 10,000 steps with fractional_gaussian_noise, got 10,001; ask for fewer"
+    assert error.value.faults[0].message == expected
