@@ -79,6 +79,12 @@ class PowerSeries:
         return float(state[0])
 
 
+@lru_cache(maxsize=16)
+def impulse_response(phi: tuple[float, ...]) -> PowerSeries:
+    """1 / phi(z); kept, since every sum over shocks asks for it again."""
+    return PowerSeries(np.ones(1), phi)
+
+
 class CrossCovariance:
     """Gamma(h) = E w_i(t + h) w_j(t), w_i and w_j stationary autoregressions of one unit white noise.
 

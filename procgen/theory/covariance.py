@@ -54,8 +54,8 @@ def condition(form: Linear) -> float:
 
 def _plain(space: Space, x: Linear, y: Linear, t: np.ndarray, s: np.ndarray) -> np.ndarray:
     total = np.zeros(t.shape)
-    for a, (delays_a, frozen_a) in _by_base(x).items():
-        for b, (delays_b, frozen_b) in _by_base(y).items():
+    for a, (delays_a, frozen_a) in by_base(x).items():
+        for b, (delays_b, frozen_b) in by_base(y).items():
             scale = space.covariance(a.source, b.source)
             if scale == 0.0:
                 continue
@@ -86,7 +86,7 @@ def _summed(gamma: CrossCovariance, gaps: np.ndarray, by: np.ndarray, weights: n
 
 @lru_cache(maxsize=64)
 def _shifts_between(x: Linear, a: Base, y: Linear, b: Base) -> tuple[np.ndarray, np.ndarray]:
-    return _shifts(_by_base(x)[a][0], _by_base(y)[b][0])
+    return _shifts(by_base(x)[a][0], by_base(y)[b][0])
 
 
 def _shifts(a: dict[int, float], b: dict[int, float]) -> tuple[np.ndarray, np.ndarray]:
@@ -116,7 +116,7 @@ def convolved(a: np.ndarray, b: np.ndarray) -> np.ndarray:
 
 
 @lru_cache(maxsize=64)
-def _by_base(form: Linear) -> dict[Base, tuple[dict[int, float], dict[int, float]]]:
+def by_base(form: Linear) -> dict[Base, tuple[dict[int, float], dict[int, float]]]:
     """For each base, the coefficients by delay and by frozen lag."""
     parts: dict[Base, tuple[dict[int, float], dict[int, float]]] = {}
     for key, c in form.items():

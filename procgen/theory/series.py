@@ -8,15 +8,20 @@ from typing import Any
 
 import numpy as np
 
-from procgen.theory import fourth, laws
+from procgen.theory import fourth, horizon, laws, memory, spectrum
 from procgen.theory.covariance import condition
 from procgen.theory.expression import Expression
+from procgen.theory.horizon import Forecast
 from procgen.theory.sources import PROCESS
 from procgen.theory.system import System, system_of
 from procgen.theory.unknown import Unknown
 from procgen.theory.verdict import Stationarity, judge
 
 WORTH_SAYING = 1e-9 / (100 * np.finfo(float).eps)  # a condition number above this weakens the promised 1e-9
+
+FREQUENCIES = (0.0, 0.1, 0.2, 0.3, 0.4, 0.5)  # cycles a step
+HORIZONS = (1, 2, 5, 10, 20, 50, 100)
+COUNTS = (1, 10, 100, 1_000, 10_000)  # steps in a mean
 
 OVERFLOW = "it is too large for double precision at a step that is asked for"
 
@@ -72,6 +77,11 @@ class SeriesTheory:
         """Whether the series at any steps is jointly Gaussian."""
         return laws.is_gaussian(self.expression)
 
+    @property
+    def random(self) -> bool:
+        """Whether anything is left to chance."""
+        return bool(self.expression.sources)
+
     @cached_property
     def discrete(self) -> bool:
         """Whether chance only chooses among few values, as for a flag."""
@@ -99,6 +109,78 @@ class SeriesTheory:
             lambda: fourth.autocovariance_of_squares(self.expression, later, np.full(later.shape, from_step)),
         )
 
+    def autocorrelation_of_squares(self, lags, from_step: int = 0) -> np.ndarray | None:
+        """Correlation of (x - E x)^2 at from_step + lag with the same at from_step, at lags >= 0."""
+
+        def correlation() -> np.ndarray:
+            x, later = self.expression, _steps(lags) + from_step
+            first = np.full(later.shape, from_step)
+            same = first if self.stationarity.covariance_stationary else later
+            spread = fourth.autocovariance_of_squares(x, first, first) * fourth.autocovariance_of_squares(x, same, same)
+            if np.any(spread <= 0.0):
+                raise Unknown("the variance of the squares is 0 at a step that is asked for")
+            return fourth.autocovariance_of_squares(x, later, first) / np.sqrt(spread)
+
+        return self._try("autocorrelation_of_squares", correlation)
+
+    def partial_autocorrelation(self, lags) -> np.ndarray | None:
+        """Correlation of x(t + lag) and x(t) given all values between, at lags >= 0; 1 at lag 0.
+
+        For a series whose autocovariances depend on the lag alone. Source: Durbin (1960).
+        """
+        return self._try(
+            "partial_autocorrelation", lambda: memory.partial_autocorrelation(self._steady(), _steps(lags))
+        )
+
+    def spectral_density(self, frequencies) -> np.ndarray | None:
+        """S(f) = sum over all lags of gamma(h) exp(-2 pi i f h), at frequencies f in cycles a step.
+
+        Two-sided and per cycle: the integral over one cycle is the variance, and S(0) the long-run variance. Raises
+        ValueError for frequencies outside -1/2 .. 1/2. Source: Brockwell & Davis (1991), ch. 4, times 2 pi.
+        """
+        f = np.asarray(frequencies, float)
+        if not np.all(np.abs(f) <= 0.5):
+            raise ValueError(f"expected frequencies in cycles a step, from -0.5 to 0.5, got {f.ravel()[:5].tolist()}")
+        return self._try("spectral_density", lambda: spectrum.spectral_density(self._steady(), f))
+
+    @cached_property
+    def half_life(self) -> int | None:
+        """The first lag from which on no autocorrelation exceeds 1/2 in size, in steps."""
+        return self._try("half_life", lambda: memory.half_life(self._steady()))
+
+    @cached_property
+    def long_run_variance(self) -> float | None:
+        """The sum of the autocovariances over all lags: n times the variance of a mean of n steps, for large n."""
+        return self._try("long_run_variance", lambda: spectrum.long_run_variance(self._steady()))
+
+    def variance_of_mean(self, counts) -> np.ndarray | None:
+        """Variance of the mean of the first n steps, n >= 1 (of any n steps in a row for a stationary series)."""
+        n = _counted("numbers of steps", counts)
+        steady = self.stationarity.covariance_stationary
+        return self._try("variance_of_mean", lambda: memory.variance_of_mean(self.expression, n, steady))
+
+    def forecast_variance(self, horizons, given: str = "values") -> np.ndarray | None:
+        """Variance of the error of the best linear forecast h >= 1 steps ahead, long after the start.
+
+        `given` is what is known of the past: the series' own "values", or the shocks of all its "parts", which tell
+        more where there are several. A linear series only; where conditional variances move it is their mean. Source:
+        Box & Jenkins (1970), ch. 5; Harvey (1989), ch. 3.
+        """
+        if given not in ("values", "parts"):
+            raise ValueError(f"expected `given` to be values or parts, got {given!r}")
+        answer = horizon.variance_given_values if given == "values" else horizon.variance_given_parts
+        h = _counted("horizons", horizons)
+        return self._try("forecast_variance", lambda: answer(self.expression, h))
+
+    def forecast(self, horizons, history: Sequence[float] = (), from_step: int = 0) -> Forecast | None:
+        """Mean and variance of what comes h >= 1 steps after `history`, the values at from_step, from_step + 1, ..
+
+        The conditional law of a Gaussian series, the best linear forecast of any other. Without a history it is what
+        the spec alone says, its `before` included. Raises ValueError for a history that the spec rules out.
+        """
+        h = _counted("horizons", horizons)
+        return self._try("forecast", lambda: horizon.forecast(self.expression, h, history, from_step))
+
     @cached_property
     def highest_moment(self) -> float | None:
         """The order below which absolute moments are known to exist (inf: all do); a lower bound where not exact."""
@@ -124,18 +206,22 @@ class SeriesTheory:
         """Why the last answer of that name was None; None when it was not."""
         return self._reasons.get(name)
 
-    def as_dict(self, at: Sequence[int], lags: int | Sequence[int] = 40) -> dict[str, Any]:
+    def as_dict(
+        self,
+        at: Sequence[int],
+        lags: int | Sequence[int] = 40,
+        frequencies: Sequence[float] = FREQUENCIES,
+        horizons: Sequence[int] = HORIZONS,
+    ) -> dict[str, Any]:
         """Plain numbers for JSON: moments at the steps `at`, and autocovariances from the first of them on.
 
-        A stationary series is looked at from step 0. Unknown numbers are None, with their reasons beside them.
+        A stationary series is looked at from step 0. Unknown numbers are None, with their reasons beside them;
+        `highest_moment` is "all" where every moment exists.
         """
         steps = np.asarray(at, np.int64)
         span = np.arange(lags + 1) if isinstance(lags, int) else np.asarray(lags, np.int64)
         first = 0 if self.stationarity.covariance_stationary or not len(steps) else int(steps[0])
-        out: dict[str, Any] = {
-            "stationarity": {"verdict": self.stationarity.verdict, "reasons": list(self.stationarity.reasons)},
-            "gaussian": self.gaussian,
-            "steps": steps.tolist(),
+        numbers: dict[str, Any] = {
             "mean": plain(self.mean(steps)),
             "variance": plain(self.variance(steps)),
             "autocovariance": {
@@ -144,15 +230,41 @@ class SeriesTheory:
                 "values": plain(self.autocovariance(span, first)),
             },
             "autocorrelation": plain(self.autocorrelation(span, first)),
+            "partial_autocorrelation": plain(self.partial_autocorrelation(span)),
+            "autocorrelation_of_squares": plain(self.autocorrelation_of_squares(span, first)),
+            "half_life": self.half_life,
+            "long_run_variance": self.long_run_variance,
+            "variance_of_mean": {"counts": list(COUNTS), "values": plain(self.variance_of_mean(COUNTS))},
+            "spectral_density": {
+                "frequencies": list(frequencies),
+                "values": plain(self.spectral_density(frequencies)),
+            },
+            "forecast_variance": {
+                "horizons": list(horizons),
+                "given_parts": plain(self.forecast_variance(horizons, given="parts")),
+                "values": plain(self.forecast_variance(horizons)),
+            },
             "excess_kurtosis": self.excess_kurtosis,
+            "highest_moment": "all" if self.highest_moment == np.inf else self.highest_moment,
         }
-        asked = ("mean", "variance", "autocovariance", "autocorrelation", "excess_kurtosis")
-        reasons = {name: self._reasons[name] for name in asked if name in self._reasons}
+        out: dict[str, Any] = {
+            "stationarity": {"verdict": self.stationarity.verdict, "reasons": list(self.stationarity.reasons)},
+            "gaussian": self.gaussian,
+            "steps": steps.tolist(),
+            **numbers,
+        }
+        reasons = {name: self._reasons[name] for name in numbers if name in self._reasons}
         if reasons:
             out["unknown"] = reasons
         if self.condition > WORTH_SAYING:
             out["condition"] = self.condition
         return out
+
+    def _steady(self) -> Expression:
+        """The series, for what needs autocovariances that depend on the lag alone."""
+        if not self.stationarity.covariance_stationary:
+            raise Unknown(f"its autocovariances depend on the step: {self.stationarity.reasons[0]}")
+        return self.expression
 
     def _try(self, name: str, answer: Callable[[], Any]) -> Any:
         try:
@@ -211,6 +323,13 @@ def _steps(steps) -> np.ndarray:
     if steps.size and (steps.dtype.kind not in "iu" or steps.min() < 0):
         raise ValueError(f"expected whole steps from 0 on, got {steps.ravel()[:5].tolist()}")
     return steps.astype(np.int64)
+
+
+def _counted(what: str, numbers) -> np.ndarray:
+    numbers = np.asarray(numbers)
+    if numbers.size and (numbers.dtype.kind not in "iu" or numbers.min() < 1):
+        raise ValueError(f"expected whole {what} from 1 on, got {numbers.ravel()[:5].tolist()}")
+    return numbers.astype(np.int64)
 
 
 def _mean(x: Expression, steps) -> np.ndarray:

@@ -7,11 +7,12 @@ autoregressions is summed exactly.
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
+from functools import lru_cache
 from math import comb
 
 import numpy as np
 
-from procgen.theory.arma import PowerSeries, cross_covariance
+from procgen.theory.arma import PowerSeries, cross_covariance, impulse_response
 from procgen.theory.linear import At, Base, Frozen, Key, Linear, Season, Sum, base_of, below
 from procgen.theory.sources import Space
 from procgen.theory.unknown import Unknown
@@ -69,11 +70,11 @@ def _weights(form: Linear, step: int, top: int, count: int) -> np.ndarray:
         elif any(isinstance(part, Season) for part in below(key)):
             total += c * _seasonal_weights(key, step, top, count)
         else:
-            response = PowerSeries(np.ones(1), base_of(key).phi).upto(count + step + 1)
+            response = impulse_response(base_of(key).phi).upto(count + step + 1)
             total += c * _before_step_0(base_of(key), _kept_weights(key, response, step, top, count), top)
     for base, weights in delays.items():
         if len(weights) <= FEW:  # delays that may lie far back are shifts of one response
-            response = PowerSeries(np.ones(1), base.phi).upto(count + 1)
+            response = impulse_response(base.phi).upto(count + 1)
             for delay, c in weights.items():
                 total += c * _before_step_0(base, _shifted(response, step - delay - top, count), top)
             continue
@@ -135,13 +136,17 @@ def _depth(form: Linear) -> int:
 
 
 def _base_depth(base: Base) -> int:
-    if base.started or not base.phi:
-        return 1
-    gamma, series, count = cross_covariance(base.phi, base.phi), PowerSeries(np.ones(1), base.phi), 64
+    return 1 if base.started or not base.phi else _memory(base.phi, base.source.key)
+
+
+@lru_cache(maxsize=256)
+def _memory(phi: tuple[float, ...], name: str) -> int:
+    """How many weights of a stationary autoregression hold all but a share LEFT_OUT of its variance."""
+    gamma, series, count = cross_covariance(phi, phi), impulse_response(phi), 64
     left_out = max(LEFT_OUT, 10 * np.finfo(float).eps * gamma.condition)
     enough = (1.0 - left_out) * float(gamma(np.array(0)))
     while float((series.upto(count) ** 2).sum()) < enough:
         count *= 2
         if count > LONGEST:
-            raise Unknown(f"{base.source.key} forgets too slowly to add up its weights")
+            raise Unknown(f"{name} forgets too slowly to add up its weights")
     return count

@@ -12,7 +12,7 @@ import numpy as np
 
 from procgen.theory.axis import Axis
 from procgen.theory.expression import Expression, opaque
-from procgen.theory.series import CrossTheory, SeriesTheory, plain
+from procgen.theory.series import FREQUENCIES, HORIZONS, CrossTheory, SeriesTheory, plain
 from procgen.theory.sources import GARCH, Source
 from procgen.theory.unknown import Unknown
 
@@ -71,9 +71,15 @@ class Theory(Mapping[str, SeriesTheory]):
             value = covariance / float(np.sqrt(a.variance * b.variance))
         return Correlated(*names, normals, value, tolerance)
 
-    def as_dict(self, at: Sequence[int], lags: int | Sequence[int] = 40) -> dict[str, Any]:
+    def as_dict(
+        self,
+        at: Sequence[int],
+        lags: int | Sequence[int] = 40,
+        frequencies: Sequence[float] = FREQUENCIES,
+        horizons: Sequence[int] = HORIZONS,
+    ) -> dict[str, Any]:
         """What `procgen theory --json` prints."""
-        series = {name: theory.as_dict(at, lags) for name, theory in self.series.items()}
+        series = {name: theory.as_dict(at, lags, frequencies, horizons) for name, theory in self.series.items()}
         cross = [entry for a, b in combinations(self.series, 2) if (entry := self._cross_entry(a, b, at))]
         correlation = [
             {"leader": c.leader, "follower": c.follower, "normals": c.normals, "values": c.values}
@@ -82,10 +88,14 @@ class Theory(Mapping[str, SeriesTheory]):
         ]
         return {"series": series, "cross": cross, "correlation": correlation}
 
-    def _cross_entry(self, a: str, b: str, at: Sequence[int]) -> dict[str, Any] | None:
-        space, steps = self.axis.space, np.asarray(at, np.int64)
+    def _go_together(self, a: str, b: str) -> bool:
+        """Whether something random is behind both series, or correlated."""
         left, right = (self.series[name].expression.sources for name in (a, b))
-        if not any(space.dependent(x, y) for x in left for y in right):
+        return any(self.axis.space.dependent(x, y) for x in left for y in right)
+
+    def _cross_entry(self, a: str, b: str, at: Sequence[int]) -> dict[str, Any] | None:
+        steps = np.asarray(at, np.int64)
+        if not self._go_together(a, b):
             return None
         cross = self.cross(a, b)
         covariance = plain(cross.covariance(steps, steps))
@@ -111,6 +121,10 @@ def theory(spec: Any, graph: Any = None) -> Theory:
 
         spec = spec_of(spec)
         graph = build(spec)
+    if graph.varied is not None and graph.varied.parameters and spec is not graph.spec:
+        from procgen.theory.mixed import mixed
+
+        return mixed(graph)
     names, matrix = spec.correlation.names, spec.correlation.matrix
     correlation = {
         frozenset((names[i], names[j])): float(matrix[i][j])
