@@ -7,7 +7,7 @@ from typing import Annotated
 
 import typer
 
-from procgen.console import guarded, printed, progress, run
+from procgen.console import guarded, printed, progress, run, said
 
 CONTEXT = {"help_option_names": ["-h", "--help"]}
 app = typer.Typer(
@@ -145,17 +145,52 @@ def validate(
     Ends with exit code 0 when they agree, 1 when they depart, 2 when it cannot be judged.
     """
     import procgen as pg
+    from procgen.report.pictures.write import page_place
     from procgen.report.rendered import verdict_json
 
+    if report is not None:
+        page_place(report)
     roles = {"path": path_col, "step": step_col, "time": time_col}
     columns = {role: name for role, name in roles.items() if name is not None} | dict(map(column_of, series_col or ()))
     stated = None if spec is None else pg.load(spec)
     with progress("reading") as tick:
         verdict = pg.validate(data, stated, false_alarm, columns or None, tick)
-    if report is not None:
-        verdict.to_html(report)
     printed(verdict_json(verdict) if json else verdict.to_text())
+    if report is not None:
+        written = f"report: {verdict.to_html(report)}"
+        said(written) if json else printed(f"\n{written}")
     raise typer.Exit({True: 0, False: 1, None: 2}[verdict.agrees])
+
+
+@app.command(
+    short_help="Draw what a spec states, and what paths show.",
+    epilog="\b\nExamples:\n  procgen picture specs/pump-flow.yaml -o pump-flow.html\n"
+    "  procgen picture build/pump-flow -o pump-flow.svg",
+)
+@guarded
+def picture(
+    source: Annotated[
+        Path, typer.Argument(metavar="SPEC|OUT", help="A spec, or a rendered ensemble.", show_default=False)
+    ],
+    out: Annotated[
+        Path,
+        typer.Option(
+            "-o",
+            "--out",
+            metavar="FILE",
+            help="File to write, replacing what is there: .html (a page), .svg, or .png (needs the extra plots).",
+            show_default=False,
+        ),
+    ],
+) -> None:
+    """Draw SPEC, with a few paths of it, or the ensemble OUT: fans, correlograms, variances, densities, quantiles.
+
+    A page needs nothing but a browser; that of an ensemble has its verdict too.
+    """
+    from procgen.report.pictures.draw import picture as draw
+
+    with progress("reading") as tick:
+        printed(f"picture: {draw(source, out, tick)}")
 
 
 @app.command(

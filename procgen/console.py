@@ -27,7 +27,7 @@ def guarded(command: Callable[..., None]) -> Callable[..., None]:
         except Exception as error:
             _stop(error)
         except KeyboardInterrupt:
-            _say("stopped; what was finished is kept, and render goes on with --resume")
+            said("stopped; what was finished is kept, and render goes on with --resume")
             raise typer.Exit(INTERRUPTED) from None
 
     return safe
@@ -89,7 +89,7 @@ def _stop(error: Exception) -> NoReturn:
     if isinstance(error, BrokenPipeError):  # whoever read the output has enough
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
         raise typer.Exit(BROKEN_PIPE) from None
-    _say(sentence(error))
+    said(sentence(error))
     raise typer.Exit(BAD_INPUT) from None
 
 
@@ -109,5 +109,6 @@ def sentence(error: Exception) -> str:
     )
 
 
-def _say(text: str) -> None:
+def said(text: str) -> None:
+    """Write a line to standard error, beside what is printed."""
     print(f"procgen: {text}", file=sys.stderr)

@@ -63,7 +63,7 @@ def validate(
         rows = [row for row in rows if not _only_absent(row, gather, absent)]
     for row in rows:
         row.series = " ~ ".join(origin.columns.get(name, name) for name in row.series.split(" ~ "))
-    return Verdict(rows, false_alarm, origin.about())
+    return Verdict(rows, false_alarm, origin.about(), origin)
 
 
 def _only_absent(row: Check, gather: Gather, absent: int) -> bool:

@@ -117,9 +117,12 @@ class Verdict:
         Probability that a true ensemble is said to depart, at most.
     """
 
-    def __init__(self, rows: Sequence[Check], false_alarm: float, about: dict[str, Any] | None = None):
+    def __init__(
+        self, rows: Sequence[Check], false_alarm: float, about: dict[str, Any] | None = None, origin: Any = None
+    ):
         self.false_alarm = false_alarm
         self.about = about or {}
+        self.origin = origin  # where the values came from: a report reads some of them again for its pictures
         self.rows = list(rows)
         _judge(self.rows, false_alarm)
         self.rows.sort(key=_rank)
@@ -177,7 +180,10 @@ class Verdict:
         return verdict_text(self, rows)
 
     def to_html(self, path: str | Path) -> Path:
-        """Write the verdict as one self-contained page; returns its path."""
+        """Write the verdict, with pictures of what it saw, as one self-contained page; returns its path.
+
+        Raises PictureError when it cannot be written.
+        """
         from procgen.report.html import write_verdict
 
         return write_verdict(self, Path(path))

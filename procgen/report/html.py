@@ -1,15 +1,23 @@
-"""A verdict as one self-contained page: nothing is loaded from elsewhere, and it reads without a script."""
+"""A verdict, and pictures of what it is about, as one self-contained page.
+
+Nothing is loaded from elsewhere, nothing needs a script.
+"""
 
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator
-from html import escape
+from collections.abc import Iterator, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING
 
 from procgen.checks import coverage
-from procgen.checks.words import number, p_text
+from procgen.checks.words import number, p_text, sentence
+from procgen.report.pictures import gallery as galleries
+from procgen.report.pictures import page
+from procgen.report.pictures.gallery import Gallery
+from procgen.report.pictures.page_style import PAGE
+from procgen.report.pictures.safe import escaped
+from procgen.report.pictures.write import write
 from procgen.report.text import CAUTION, reported
 
 if TYPE_CHECKING:
@@ -30,123 +38,143 @@ _HEAD = (
     "p",
     "smallest departure found",
     "outcome",
-    "note",
+    "in words",
 )
-_STYLE = """
-:root { color-scheme: light dark; --ink: #1d2730; --soft: #5c6b78; --paper: #fcfbf8; --card: #ffffff; --line: #dcd8cf;
-  --good: #1b6b5c; --bad: #a5361c; --open: #7a6420; --bar: #4a7fa5; }
-@media (prefers-color-scheme: dark) { :root { --ink: #e4e6e3; --soft: #9aa7b0; --paper: #15191c; --card: #1d2327;
-  --line: #343d43; --good: #6cc3ae; --bad: #f0907a; --open: #d8bd6a; --bar: #7fb2d6; } }
-* { box-sizing: border-box; }
-body { margin: 0 auto; max-width: 76rem; padding: 2rem 1.2rem 4rem; background: var(--paper); color: var(--ink);
-  font: 16px/1.5 "Iowan Old Style", "Palatino Linotype", Palatino, Georgia, serif; }
-h1 { font-size: 1.1rem; font-weight: 500; color: var(--soft); margin: 0; }
-h2 { font-size: 1.15rem; margin: 2.4rem 0 .6rem; }
-.verdict { font-size: 2.3rem; line-height: 1.15; margin: .2rem 0 .8rem; }
-.agrees { color: var(--good); } .departs { color: var(--bad); } .untestable, .reported { color: var(--open); }
-.facts { color: var(--soft); margin: 0; }
-ul.found { padding: 0; list-style: none; }
-ul.found li { background: var(--card); border: 1px solid var(--line); border-left: .35rem solid var(--bad);
-  padding: .6rem .9rem; margin: .5rem 0; overflow-wrap: anywhere; }
-.scroll { overflow-x: auto; border: 1px solid var(--line); background: var(--card); }
-table { border-collapse: collapse; width: 100%; font: 13px/1.45 ui-sans-serif, system-ui, "Segoe UI", sans-serif;
-  font-variant-numeric: tabular-nums; }
-th, td { padding: .35rem .6rem; text-align: left; vertical-align: top; border-bottom: 1px solid var(--line); }
-th { color: var(--soft); font-weight: 600; background: var(--card); position: sticky; top: 0; }
-td.n { text-align: right; white-space: nowrap; }
-td.note { min-width: 14rem; color: var(--soft); }
-td.p { min-width: 6.5rem; white-space: nowrap; }
-.bar { display: inline-block; height: .55rem; background: var(--bar); margin-right: .4rem; vertical-align: baseline; }
-tr.departs .bar { background: var(--bad); }
-tr.departs td { background: color-mix(in srgb, var(--bad) 8%, transparent); }
-summary { cursor: pointer; color: var(--soft); margin: 1.4rem 0 .5rem; }
-.caution { border-top: 1px solid var(--line); margin-top: 3rem; padding-top: 1rem; color: var(--soft);
-  max-width: 46rem; }
-code { font-size: .85em; overflow-wrap: anywhere; }
-@media print { body { max-width: none; padding: 0; background: #fff; } th { position: static; }
-  details > * { display: block; } .scroll { overflow: visible; } }
-"""
+_FIGURES = (3, 4, 5, 7)  # of _HEAD: columns of numbers
+MOST_ROWS = 300  # of a table: more would not be read, and weigh more than all pictures
+_CAUTIONS = (
+    "Pictures are for looking, the checks are for judging: a band of chance holds 95 times in 100 for each point on "
+    "its own, so that a few points outside mean nothing.",
+    "Stored values are rounded where the spec has decimals or a type; what is stated is that of the values as drawn.",
+)
 
 
 def write_verdict(verdict: Verdict, path: Path) -> Path:
-    """Write the page; the folder must exist. Returns the path."""
-    path.write_text(verdict_page(verdict), encoding="utf-8")
-    return path
+    """Write the page of a verdict; the folder must exist. Returns the path."""
+    return write(path, verdict_page(verdict))
 
 
 def verdict_page(verdict: Verdict) -> str:
-    """The whole page as HTML."""
-    title = escape(str(verdict.about.get("title") or "Verdict"))
-    return "\n".join(
-        [
-            "<!doctype html>",
-            '<html lang="en"><head><meta charset="utf-8">',
-            '<meta name="viewport" content="width=device-width, initial-scale=1">',
-            f"<title>{title} – {_TITLES[verdict.verdict]}</title>",
-            f"<style>{_STYLE}</style></head><body>",
-            f"<header><h1>{title}</h1>",
-            f'<p class="verdict {verdict.verdict}">{_TITLES[verdict.verdict]}</p>',
-            f'<p class="facts">{escape(verdict.title)}</p>',
-            *_facts(verdict),
-            "</header><main>",
-            *_found(verdict),
-            *_covered(verdict),
-            *_tables(verdict),
-            f'</main><footer class="caution"><p>{escape(CAUTION)}</p></footer></body></html>',
-            "",
-        ]
-    )
+    """The page of a verdict, with pictures where it knows its data."""
+    return whole_page(galleries.of_verdict(verdict), verdict)
 
 
-def _facts(verdict: Verdict) -> Iterator[str]:
+def whole_page(gallery: Gallery | None, verdict: Verdict | None = None) -> str:
+    """A page of pictures, of a verdict, or of both."""
+    about = verdict.about if verdict is not None else {}
+    title = escaped(about.get("title") or (gallery.title if gallery else "") or "Verdict")
+    judged = f" – {_TITLES[verdict.verdict]}" if verdict is not None else ""
+    parts = [
+        "<!doctype html>",
+        '<html lang="en"><head><meta charset="utf-8">',
+        '<meta name="viewport" content="width=device-width, initial-scale=1">',
+        f"<title>{title}{judged}</title>",
+        f"<style>{PAGE}</style></head><body>",
+        f"<header><h1>{title}</h1>",
+        *(_lead(verdict) if verdict is not None else _unjudged()),
+        *(_seen(gallery) if gallery is not None else ()),
+        "</header><main>",
+    ]
+    if verdict is not None:
+        parts += [*_found(verdict), *_covered(verdict)]
+    if gallery is not None:
+        parts += page.series(gallery, _by_series(verdict))
+    if verdict is not None:
+        parts += _tables(verdict)
+    if gallery is not None:
+        parts += page.provenance(gallery)
+    elif verdict is not None:
+        parts += _digests(verdict)
+    cautions = "".join(f"<p>{escaped(text)}</p>" for text in (CAUTION, *(_CAUTIONS if gallery is not None else ())))
+    return "\n".join([*parts, f"</main><footer>{cautions}</footer></body></html>", ""])
+
+
+def _lead(verdict: Verdict) -> Iterator[str]:
     about = verdict.about
+    yield f'<p class="verdict {verdict.verdict}">{_TITLES[verdict.verdict]}</p>'
     counts = ", ".join(f"{count} {what}" for what, count in sorted(verdict.counts.items()))
     size = f"{about['paths']:,} paths × {about['steps']:,} steps. " if "paths" in about else ""
-    yield f'<p class="facts">{escape(size)}{len(verdict.rows)} checks: {escape(counts)}.</p>'
-    yield from (f'<p class="facts">{escape(line)}.</p>' for line in reported(verdict))
+    yield f'<p class="facts">{escaped(verdict.title)}.</p>'
+    yield f'<p class="facts">{escaped(size)}{len(verdict.rows)} checks: {escaped(counts)}.</p>'
+    yield from (f'<p class="facts">{escaped(line)}.</p>' for line in reported(verdict))
     yield (
         '<p class="facts">Data of exactly the stated behaviour are called departing at most '
         f"{number(verdict.false_alarm)} of the time, over all checks together (Holm).</p>"
     )
+
+
+def _unjudged() -> Iterator[str]:
+    yield '<p class="facts">What a spec states, and a few paths of it. Nothing has been judged.</p>'
+
+
+def _seen(gallery: Gallery) -> Iterator[str]:
+    yield (
+        '<p class="facts">In the pictures, what is stated is blue, what is seen is in ink, and what chance allows is '
+        f"grey. They show {escaped(gallery.sample.says)}.</p>"
+    )
+    yield from page.contents(gallery)
+
+
+def _digests(verdict: Verdict) -> Iterator[str]:
+    yield "<section><h2>Where this is from</h2><dl>"
     for what, name in (("digest", "values"), ("spec_digest", "spec")):
-        if about.get(what):
-            yield f'<p class="facts">SHA-256 of the {name}: <code>{escape(about[what])}</code></p>'
+        if verdict.about.get(what):
+            yield f"<dt>SHA-256 of the {name}</dt><dd>{escaped(verdict.about[what])}</dd>"
+    yield "</dl></section>"
 
 
 def _found(verdict: Verdict) -> Iterator[str]:
     lines = verdict.headline
     if lines:
-        yield "<h2>What departs</h2><ul class='found'>"
-        yield from (f"<li>{escape(line)}</li>" for line in lines)
-        yield "</ul>"
+        yield '<section><h2>What departs</h2><ul class="found">'
+        yield from (f"<li>{escaped(line)}</li>" for line in lines)
+        yield "</ul></section>"
 
 
 def _covered(verdict: Verdict) -> Iterator[str]:
     lines = list(coverage.lines(verdict.coverage))
     if lines:
-        yield "<h2>What was judged</h2><ul>"
-        yield from (f"<li>{escape(line)}</li>" for line in lines)
-        yield "</ul>"
+        yield '<section><h2>What was judged</h2><ul class="plain">'
+        yield from (f"<li>{escaped(line)}</li>" for line in lines)
+        yield "</ul></section>"
+
+
+def _by_series(verdict: Verdict | None) -> dict[str, Sequence[str]]:
+    """A sentence for each kind of departure of each series."""
+    groups: dict[tuple[str, str], list[Check]] = {}
+    for row in verdict.rows if verdict is not None else ():
+        if row.outcome == "departs":
+            groups.setdefault((row.series, row.kind), []).append(row)
+    found: dict[str, list[str]] = {}
+    for (series, _), rows in groups.items():
+        found.setdefault(series, []).append(sentence([rows]).removeprefix(f"{series}: "))
+    return dict(found)
 
 
 def _tables(verdict: Verdict) -> Iterator[str]:
     """Departures and the judged checks open, what was not judged folded away."""
     judged = [row for row in verdict.rows if row.outcome in ("departs", "agrees")]
     rest = [row for row in verdict.rows if row.outcome not in ("departs", "agrees")]
-    yield "<h2>Checks, the largest disagreement first</h2>"
+    yield '<section id="checks"><h2>Checks, the largest disagreement first</h2>'
     yield from _table(judged)
     if rest:
         yield f"<details><summary>{len(rest)} checks that could not be judged, with the reasons</summary>"
         yield from _table(rest)
         yield "</details>"
+    yield "</section>"
 
 
 def _table(rows: list[Check]) -> Iterator[str]:
     yield '<div class="scroll"><table><thead><tr>'
-    yield "".join(f'<th scope="col">{name}</th>' for name in _HEAD)
+    for place, name in enumerate(_HEAD):
+        yield f'<th scope="col"{" class=n" if place in _FIGURES else ""}>{name}</th>'
     yield "</tr></thead><tbody>"
-    yield from map(_row, rows)
+    yield from map(_row, rows[:MOST_ROWS])
     yield "</tbody></table></div>"
+    left = rows[MOST_ROWS:]
+    if left:
+        outcomes = ", ".join(sorted({row.outcome for row in left}))
+        yield f'<p class="facts">{len(left):,} more are not shown here ({outcomes}); validate --json lists all.</p>'
 
 
 def _row(row: Check) -> str:
@@ -154,12 +182,20 @@ def _row(row: Check) -> str:
     if row.log_p is not None:
         width = min(4.0, -row.log_p / math.log(10) * 0.35)
         p = f'<span class="bar" style="width:{width:.2f}rem"></span>{p_text(row.log_p)}'
-    cells = [escape(text) for text in (row.series, row.what, row.probe)]
+    cells = [escaped(text) for text in (row.series, row.what, row.probe)]
     figures = [number(x) for x in (row.theory, row.estimate, row.standard_error)]
     return (
         f'<tr class="{row.outcome}">'
         + "".join(f"<td>{cell}</td>" for cell in cells)
         + "".join(f'<td class="n">{figure}</td>' for figure in figures)
         + f'<td class="p">{p}</td><td class="n">{number(row.detectable, 3)}</td>'
-        + f'<td class="{row.outcome}">{row.outcome}</td><td class="note">{escape(row.note)}</td></tr>'
+        + f'<td class="{row.outcome}">{row.outcome}</td><td class="note">{escaped(_words(row))}</td></tr>'
     )
+
+
+def _words(row: Check) -> str:
+    """What departs in a sentence; of others what there is to say."""
+    if row.outcome != "departs" or row.kind == "structure" or row.what == "values":
+        return row.note
+    said = sentence([[row]]).removeprefix(f"{row.series}: ")
+    return f"{said}; {row.note}" if row.note else said

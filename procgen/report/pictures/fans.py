@@ -1,0 +1,220 @@
+"""Pictures along the steps: a fan of paths, and the parts that a path is made of."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping
+from itertools import pairwise
+
+import numpy as np
+from numpy.typing import NDArray
+
+from procgen.report.pictures.chart import Axis, Band, Cells, Chart, Line, Mark, Note
+from procgen.report.pictures.safe import short
+from procgen.report.pictures.sample import STRIP
+from procgen.report.pictures.seen import ENOUGH, quantiles
+from procgen.report.pictures.subject import LEVELS, Subject, some, texts
+from procgen.report.pictures.ticks import axis, step_axis
+
+FULL = 370  # steps up to which a whole range is shown one by one: a year of days
+BEGINNING = 240  # the same of the beginning of a longer one
+BUCKETS = 160  # points of a longer range
+LOOKS = 8  # steps of a bucket at which its bands are taken
+PATHS, FEW = 4, 12  # paths that are drawn beside bands of the sample, and without them
+MOST_PARTS = 8
+
+
+def fans(subject: Subject) -> Iterator[Chart]:
+    """The whole range, and its beginning step by step where the whole is too long for that."""
+    if subject.steps <= FULL:
+        yield fan(subject, subject.steps, f"Paths of {subject.called}")
+        return
+    yield overview(subject)
+    window = min(BEGINNING, max(96, 3 * (subject.stated.period or 64)))
+    yield fan(subject, window, f"The first {window} steps, one by one")
+
+
+def fan(subject: Subject, steps: int, title: str) -> Chart:
+    """The first `steps` steps: stated quantiles as bands, those of the sample as curves, and a few paths."""
+    at = np.arange(steps)
+    stated, kind = subject.stated.quantiles(at, LEVELS)
+    marks: list[Mark] = []
+    if stated is not None:
+        marks += _bands(at, stated, kind)
+    values = subject.values[:, :steps]
+    seen = quantiles(values, LEVELS) if subject.paths >= ENOUGH else None
+    shown = values[: PATHS if seen is not None else FEW]
+    marks += [Line(at, row, "path", _paths(len(shown)) if i == 0 else "") for i, row in enumerate(shown)]
+    if seen is not None:
+        for level, row in zip((0, 2, 4), seen[[0, 2, 4]], strict=True):
+            marks.append(Line(at, row, "seen", "seen 5, 50, 95 %" if level == 0 else ""))
+    caption = _caption(subject, stated, kind, values)
+    y = _range(stated, seen, shown)
+    x = step_axis(subject.grid, 0, steps - 1)
+    return Chart(title, caption, x, y, marks, *_numbers(at, stated, seen, shown))
+
+
+def overview(subject: Subject) -> Chart:
+    """All steps in BUCKETS columns: bands at their widest, paths from their lowest to their highest value."""
+    edges = np.linspace(0, subject.steps, BUCKETS + 1).astype(np.int64)
+    width = int(np.diff(edges).min())
+    looks = min(LOOKS, width) if subject.stated.theory.gaussian or subject.stated.steady else min(2, width)
+    offsets = (np.arange(looks) * width) // looks
+    at = edges[:-1, None] + offsets  # (buckets, looks)
+    middle = (edges[:-1] + edges[1:] - 1) / 2
+    outer = (LEVELS[0], LEVELS[-1])
+    stated, kind = subject.stated.quantiles(at.ravel(), outer)
+    marks: list[Mark] = []
+    if stated is not None:
+        stated = _widest(stated, at.shape)
+        marks.append(Band(middle, stated[0], stated[1], "stated", _band_name(kind)))
+    seen = None
+    if subject.paths >= ENOUGH:
+        seen = _widest(quantiles(subject.values[:, at.ravel()], outer), at.shape)
+    shown = subject.values[:2]
+    for i, row in enumerate(shown):
+        marks.append(Line(*_swing(row, edges), "path", _paths(len(shown)) if i == 0 else ""))
+    if seen is not None:
+        marks += [Line(middle, row, "seen", "seen 5 and 95 %" if i == 0 else "") for i, row in enumerate(seen)]
+    each = int(np.ceil(subject.steps / BUCKETS))
+    caption = (
+        f"All {subject.steps:,} steps; a point gathers {each} of them, for which bands are shown at their widest and "
+        "paths from their lowest to their highest value."
+    )
+    pick = some(BUCKETS, 12)
+    head, rows = _numbers(
+        edges[:-1][pick], None if stated is None else stated[:, pick], None if seen is None else seen[:, pick], None
+    )
+    y = _range(stated, seen, shown)
+    return Chart(
+        f"Paths of {subject.called}", caption, step_axis(subject.grid, 0, subject.steps - 1), y, marks, head, rows
+    )
+
+
+def strips(subject_steps: int, grid: object, parts: Mapping[str, NDArray], first_path: int) -> Chart:
+    """What one path is made of: each revealed term or output in a lane of its own, states as blocks."""
+    names = list(parts)[:MOST_PARTS]
+    steps = min(subject_steps, STRIP, BEGINNING, *(len(parts[name]) for name in names))
+    at = np.arange(steps)
+    marks: list[Mark] = []
+    ticks: list[tuple[float, str]] = []
+    rows = []
+    for lane, name in enumerate(reversed(names)):
+        values = np.asarray(parts[name], float)[:steps]
+        low, high = np.nanmin(values), np.nanmax(values)
+        states = np.unique(values[np.isfinite(values)])
+        if 1 < len(states) <= 6 and bool((states == np.rint(states)).all()):
+            marks.append(Cells(_blocks(values, states, lane), "seen"))
+        else:
+            span = float(high - low) or 1.0
+            marks.append(Line(at, lane + 0.06 + 0.72 * (values - low) / span, "seen"))
+        ticks.append((lane + 0.4, ""))
+        marks.append(Note(0.0, lane + 0.84, f"{short(name, 34)}: {_span(low, high)}"))
+        rows.append((name, *(f"{x:.6g}".replace("-", "−") for x in (low, values.mean(), high))))
+    more = f" ({len(parts) - len(names)} more are not shown)" if len(parts) > len(names) else ""
+    caption = (
+        f"What path {first_path} is made of over its first {steps} steps, each part on a scale of its own from its "
+        f"lowest to its highest value; states are blocks, the lowest number at the bottom{more}."
+    )
+    return Chart(
+        "Parts of one path",
+        caption,
+        step_axis(grid, 0, steps - 1),
+        Axis(0.0, float(len(names)), tuple(ticks)),
+        marks,
+        ("part", "lowest", "mean", "highest"),
+        rows[::-1],
+    )
+
+
+def _span(low: float, high: float) -> str:
+    return f"{low:.4g}".replace("-", "−") + ("" if low == high else f" to {high:.4g}".replace("-", "−"))
+
+
+def _blocks(values: NDArray, states: NDArray, lane: int) -> NDArray:
+    """Runs of one state as cells, a row of the lane for each state."""
+    edges = np.flatnonzero(np.diff(values) != 0) + 1
+    begin, end = np.concatenate([[0], edges]), np.concatenate([edges, [len(values)]])
+    row = np.searchsorted(states, values[begin])
+    height = 0.72 / len(states)
+    low = lane + 0.06 + row * height
+    return np.column_stack([begin - 0.5, end - 0.5, low, low + 0.9 * height])
+
+
+def _bands(at: NDArray, stated: NDArray, kind: str) -> list[Mark]:
+    marks: list[Mark] = [Band(at, stated[0], stated[-1], "stated", _band_name(kind))]
+    if kind == "exact":
+        marks.append(Band(at, stated[1], stated[3], "stated", "and 50 %", core=True))
+    marks.append(Line(at, stated[2], "stated", "stated median" if kind == "exact" else "stated mean"))
+    return marks
+
+
+def _band_name(kind: str) -> str:
+    return "stated 90 %" if kind == "exact" else "stated mean ± 2 sd"
+
+
+def _paths(count: int) -> str:
+    return "a path" if count == 1 else f"{count} paths"
+
+
+def _caption(subject: Subject, stated: NDArray | None, kind: str, values: NDArray) -> str:
+    if stated is None:
+        return f"Paths only: no stated band, because {kind}."
+    known = np.isfinite(values)
+    room = 1e-9 * float(np.nanmax(np.abs(stated))) + subject.grain / 2
+    inside = (values >= stated[0] - room) & (values <= stated[-1] + room)
+    percent = 100.0 * inside.sum() / max(int(known.sum()), 1)
+    if subject.stated.still:
+        return f"Nothing is left to chance: {percent:.4g} % of the values of {subject.whose()} are the stated ones."
+    band = "the stated 90 % band" if kind == "exact" else "mean ± 2 sd (its quantiles have no closed form)"
+    return f"{percent:.1f} % of the values of {subject.whose()} at these steps lie within {band}."
+
+
+def _numbers(
+    at: NDArray, stated: NDArray | None, seen: NDArray | None, shown: NDArray | None
+) -> tuple[tuple[str, ...], list[tuple[str, ...]]]:
+    """Head and rows: the steps, stated and seen quantiles at them, and the first path."""
+    pick = some(len(at), 16)
+    head, columns = ["step"], [[str(t) for t in at[pick]]]
+    for name, rows in (("stated", stated), ("seen", seen)):
+        if rows is not None:
+            levels = ("low", "middle", "high") if len(rows) > 2 else ("low", "high")
+            chosen = rows[[0, len(rows) // 2, -1]] if len(rows) > 2 else rows
+            head += [f"{name}, {level}" for level in levels]
+            columns += [row[pick] for row in chosen]
+    if shown is not None and len(shown):
+        head.append("first path")
+        columns.append(shown[0][pick])
+    return tuple(head), texts(*columns)
+
+
+def _range(stated: NDArray | None, seen: NDArray | None, shown: NDArray) -> Axis:
+    """Up and down to all bands, and to the paths as far as these do not dwarf the bands."""
+    bands = [x[np.isfinite(x)] for x in (stated, seen) if x is not None]
+    paths = shown[np.isfinite(shown)]
+    if not len(paths):
+        paths = np.zeros(1)
+    low, high = float(paths.min()), float(paths.max())
+    if bands and sum(map(len, bands)):
+        b = np.concatenate(bands)
+        size = float(b.max() - b.min())
+        low = min(float(b.min()), max(low, float(b.min()) - size))
+        high = max(float(b.max()), min(high, float(b.max()) + size))
+    return axis(low, high, most=5, room=0.03)
+
+
+def _widest(rows: NDArray, shape: tuple[int, ...]) -> NDArray:
+    low, high = rows[0].reshape(shape), rows[-1].reshape(shape)
+    return np.array([np.fmin.reduce(low, axis=1), np.fmax.reduce(high, axis=1)])
+
+
+def _swing(row: NDArray, edges: NDArray) -> tuple[NDArray, NDArray]:
+    """Lowest and highest value of each bucket, in the order in which they come."""
+    places = []
+    for a, b in pairwise(edges.tolist()):
+        part = row[a:b]
+        if np.isfinite(part).any():
+            places += sorted({a + int(np.nanargmin(part)), a + int(np.nanargmax(part))})
+        else:
+            places.append(a)
+    at = np.array(places)
+    return at, row[at]

@@ -1,0 +1,116 @@
+"""All charts of a sample and its theory, series by series, and what is to be said beside them."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+from procgen.report.pictures import between, fans, laws, memory
+from procgen.report.pictures.chart import Chart
+from procgen.report.pictures.sample import Sample, of_ensemble, of_origin, of_spec
+from procgen.report.pictures.subject import Subject, subjects
+
+if TYPE_CHECKING:
+    from procgen.checks.verdict import Verdict
+
+
+@dataclass(frozen=True)
+class Section:
+    """One series with its charts."""
+
+    subject: Subject
+    charts: tuple[Chart, ...]
+
+
+@dataclass(frozen=True)
+class Gallery:
+    """What is stated and seen of every series, and of what they share.
+
+    `record` says what the values are: pairs of a name and its value, such as digests and versions.
+    """
+
+    sample: Sample
+    theory: Any
+    sections: tuple[Section, ...]
+    shared: tuple[Chart, ...]
+    record: tuple[tuple[str, str], ...]
+
+    @property
+    def title(self) -> str:
+        return self.sample.spec.title or ", ".join(self.sample.spec.series)
+
+    @property
+    def groups(self) -> list[tuple[str, Sequence[Chart]]]:
+        """Heading and charts, for what knows no more than that."""
+        found: list[tuple[str, Sequence[Chart]]] = [(s.subject.called, s.charts) for s in self.sections]
+        return found + ([("Between series", self.shared)] if self.shared else [])
+
+
+def of_verdict(verdict: Verdict) -> Gallery | None:
+    """The pictures of what a verdict has judged; None where it does not know its data."""
+    if verdict.origin is None:
+        return None
+    sample = of_origin(verdict.origin)
+    pairs = [tuple(row.series.split(" ~ ")) for row in verdict.rows if row.outcome == "departs" and " ~ " in row.series]
+    ensemble = getattr(verdict.origin, "ensemble", None)
+    record = _record_of_data(ensemble, sample.spec) if ensemble is not None else _record(sample.spec)
+    return _gallery(sample, record, [(a, b) for a, b, *_ in pairs])
+
+
+def of_spec_alone(spec: Any) -> Gallery:
+    """The pictures of a spec, with a few paths drawn for them."""
+    return _gallery(of_spec(spec), _record(spec))
+
+
+def of_data(ensemble: Any) -> Gallery:
+    """The pictures of an ensemble."""
+    return _gallery(of_ensemble(ensemble), _record_of_data(ensemble, ensemble.spec))
+
+
+def _gallery(sample: Sample, record: Sequence[tuple[str, str]], suspects: Sequence[tuple[str, str]] = ()) -> Gallery:
+    from procgen.theory import theory
+
+    known = theory(sample.spec)
+    every = subjects(sample, known)
+    sections = tuple(Section(subject, tuple(_charts(subject))) for subject in every)
+    shared = list(between.between(every, known, suspects))
+    if sample.parts:
+        shared.append(fans.strips(sample.steps, sample.spec.time, sample.parts, sample.first_path))
+    return Gallery(sample, known, sections, tuple(shared), tuple(record))
+
+
+def _charts(subject: Subject) -> Iterator[Chart]:
+    yield from fans.fans(subject)
+    for draw in (memory.autocorrelations, memory.squares, laws.variance, laws.density, laws.quantile_plot):
+        chart = draw(subject)
+        if chart is not None:
+            yield chart
+
+
+def _record(spec: Any) -> list[tuple[str, str]]:
+    from procgen.chance.streams import STREAM_VERSION
+    from procgen.ensemble.manifest import versions
+
+    return [
+        ("seed", str(spec.seed)),
+        ("stream version", str(STREAM_VERSION)),
+        ("SHA-256 of the spec", spec.digest()),
+        ("pictures made by", _listed(versions())),
+    ]
+
+
+def _record_of_data(ensemble: Any, spec: Any) -> list[tuple[str, str]]:
+    out = _record(spec)
+    manifest = getattr(ensemble, "manifest", None)
+    if manifest is not None:
+        out.insert(0, ("ensemble", str(ensemble.path)))
+        out.append(("SHA-256 of the values", manifest.digest))
+        out.append(("values made by", _listed(manifest.versions)))
+        if not manifest.portable:
+            out.append(("not the same bits on every machine", manifest.why_not_portable))
+    return out
+
+
+def _listed(versions: Mapping[str, str]) -> str:
+    return ", ".join(f"{name} {version}" for name, version in versions.items())

@@ -1,0 +1,117 @@
+"""The parts of a page that show charts, what is stated, and where it all came from."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from typing import Any
+
+from procgen.report.pictures.chart import Chart
+from procgen.report.pictures.gallery import Gallery, Section
+from procgen.report.pictures.safe import escaped
+from procgen.report.pictures.svg import figure
+
+WIDTH = 92  # letters of a line of an equation
+MANY = 3  # series from which a page begins with a list of them
+
+
+def contents(gallery: Gallery) -> Iterator[str]:
+    """A list of the series, where there are many."""
+    if len(gallery.sections) >= MANY:
+        yield '<nav aria-label="Series"><ul>'
+        for place, section in enumerate(gallery.sections):
+            yield f'<li><a href="#series-{place}">{escaped(section.subject.name)}</a></li>'
+        yield "</ul></nav>"
+
+
+def series(gallery: Gallery, found: dict[str, Sequence[str]]) -> Iterator[str]:
+    """A section for each series; `found` are sentences about what departs in it."""
+    equations = _equations(gallery.sample.spec)
+    for place, section in enumerate(gallery.sections):
+        yield f'<section class="series" id="series-{place}">'
+        yield from _heading(section, found.get(section.subject.name, ()))
+        text = equations.get(section.subject.name)
+        if text:
+            yield f"<pre>{escaped(text)}</pre>"
+        yield from figures(section.charts, f"s{place}")
+        yield "</section>"
+    if gallery.shared:
+        yield '<section id="between"><h2>'
+        yield "Between series and within a path" if gallery.sample.parts else "Between series"
+        yield "</h2>"
+        yield from figures(gallery.shared, "b")
+        yield "</section>"
+
+
+def _heading(section: Section, found: Sequence[str]) -> Iterator[str]:
+    subject = section.subject
+    unit = f' <span class="unit">{escaped(subject.unit)}</span>' if subject.unit else ""
+    yield f"<h2>{escaped(subject.name)}{unit}</h2>"
+    note = subject.sample.spec.series[subject.name].note
+    if note:
+        yield f'<p class="facts">{escaped(note)}</p>'
+    verdict, reasons = subject.stated.theory.stationarity
+    yield f"<p>Stated: {escaped(verdict)}. {escaped('; '.join(reasons))}.</p>"
+    if found:
+        yield '<ul class="found">'
+        yield from (f"<li>{escaped(line)}</li>" for line in found)
+        yield "</ul>"
+
+
+def figures(charts: Sequence[Chart], name: str) -> Iterator[str]:
+    """Figures side by side where there is room."""
+    yield '<div class="figures phone">'
+    for place, chart in enumerate(charts):
+        yield f"<figure><h3>{escaped(chart.title)}</h3>{figure(chart, f'{name}-{place}')}"
+        yield f"<figcaption>{escaped(chart.caption)}</figcaption>"
+        yield from _numbers(chart)
+        yield "</figure>"
+    yield "</div>"
+
+
+def _numbers(chart: Chart) -> Iterator[str]:
+    if not chart.rows:
+        return
+    yield '<details><summary>The numbers</summary><div class="scroll"><table><thead><tr>'
+    yield "".join(f'<th class="n" scope="col">{escaped(name)}</th>' for name in chart.head)
+    yield "</tr></thead><tbody>"
+    for row in chart.rows:
+        yield "<tr>" + "".join(f'<td class="n">{escaped(cell)}</td>' for cell in row) + "</tr>"
+    yield "</tbody></table></div></details>"
+
+
+def provenance(gallery: Gallery) -> Iterator[str]:
+    """The spec in full, and what the values are and what made them."""
+    import yaml
+
+    spec = gallery.sample.spec
+    text = yaml.safe_dump(_plain(spec.raw), sort_keys=False, allow_unicode=True, default_flow_style=None, width=100)
+    yield f'<section id="spec"><h2>The spec</h2><pre>{escaped(text.rstrip())}</pre></section>'
+    yield '<section id="record"><h2>Where this is from</h2><dl>'
+    yield from (f"<dt>{escaped(name)}</dt><dd>{escaped(value)}</dd>" for name, value in gallery.record)
+    yield f"<dt>pictures show</dt><dd>{escaped(gallery.sample.says)}</dd></dl></section>"
+
+
+def _plain(value: Any) -> Any:
+    """Only what YAML has letters for."""
+    if isinstance(value, dict):
+        return {str(key): _plain(item) for key, item in value.items()}
+    if isinstance(value, list | tuple):
+        return [_plain(item) for item in value]
+    return value if isinstance(value, str | int | float | bool) or value is None else str(value)
+
+
+def _equations(spec: Any) -> dict[str, str]:
+    """The equations of each body by its name; those of shared bodies stand before the first series."""
+    from procgen.report.equations import equations
+
+    bodies: list[list[str]] = []
+    for line in equations(spec, WIDTH):
+        if not line:
+            bodies.append([])
+        else:
+            bodies[-1].append(line)
+    names = [*spec.shared, *spec.series]
+    texts = dict(zip(names, ("\n".join(body) for body in bodies), strict=True))
+    first = next(iter(spec.series))
+    texts[first] = "\n\n".join([*(texts[name] for name in spec.shared), texts[first]])
+    return texts
