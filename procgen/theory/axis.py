@@ -13,20 +13,18 @@ from procgen.theory.arma import PowerSeries, spectral_radius
 from procgen.theory.chains import States, Switching
 from procgen.theory.expression import Expression, opaque, product
 from procgen.theory.fractional import Filtered, FractionalNoise, GaussianNoise, StationaryGaussian
-from procgen.theory.garch import Garch
 from procgen.theory.known import Known
 from procgen.theory.laws import is_gaussian
 from procgen.theory.linear import At, Base, Linear
-from procgen.theory.logvariance import Egarch, Stochastic
 from procgen.theory.processes import Chain, Curved, Held, Hinged, Process, mean_at
-from procgen.theory.sources import GARCH, IID, PROCESS, SQUARES, Source, Space, roots
+from procgen.theory.sources import GARCH, IID, PROCESS, Source, Space, roots
 from procgen.theory.unknown import Unknown
-from procgen.theory.verdict import CYCLES, LEAVES, LEAVES_VARIANCE, UNIT_ROOT, judge
-from procgen.theory.volatility import ConditionalVariance, Gjr, Volatility
+from procgen.theory.verdict import CYCLES, LEAVES, UNIT_ROOT, judge
+from procgen.theory.volatile import Volatile
 
 
 @dataclass
-class Axis:
+class Axis(Volatile):
     """The steps of a spec and its sources.
 
     Parameters
@@ -44,11 +42,6 @@ class Axis:
 
     def __post_init__(self) -> None:
         self.space = Space(self.correlation, self.horizon)
-
-    @property
-    def name(self) -> str:
-        """The term at work, as reasons name it."""
-        return self.space.name
 
     def at_work(self, name: str, period: float | None = None) -> None:
         """Say which term writes its moments next."""
@@ -68,67 +61,6 @@ class Axis:
     def source(self, key: str, law: Any, sd: float) -> Expression:
         """Independent shocks of a law, standard deviation `sd`, at the address `key`."""
         return self._noise(self.space.add(Source(key, IID, float(sd) ** 2, law)))
-
-    def garch(
-        self,
-        key: str,
-        law: Any,
-        omega: float,
-        alpha: Sequence[float],
-        beta: Sequence[float] = (),
-        before_variance: Sequence[float] | None = None,
-        before_shocks: Sequence[float] | None = None,
-    ) -> Expression:
-        """White shocks with conditional variance; the `before` ones are oldest first, without shocks e^2 is h."""
-        squares: tuple[float, ...] = ()
-        if before_variance is not None:
-            squares = tuple(e * e for e in before_shocks or ()) or tuple(before_variance)
-        process = Garch(
-            law, float(omega), tuple(alpha), tuple(beta),
-            tuple(before_variance) if before_variance is not None else None, squares,
-        )  # fmt: skip
-        path = process.variance_path if process.started else None
-        settles = process.settles if process.started else 0.0
-        source = self.space.add(Source(key, GARCH, process.variance, law, path, settles, detail=process))
-        noise = self._noise(source, started=process.started)
-        return Expression(
-            self.space, self._past(before_shocks), noise.linear, outputs={"variance": lambda: self._variance(source)}
-        )
-
-    def gjr_garch(
-        self,
-        key: str,
-        law: Any,
-        omega: float,
-        alpha: float,
-        gamma: float,
-        beta: float,
-        first_variance: float | None = None,
-        before: Sequence[float] | None = None,
-    ) -> Expression:
-        """White shocks, h(t) = omega + (alpha + gamma I(e(t-1) < 0)) e(t-1)^2 + beta h(t-1), or from a given h(0)."""
-        return self._volatile(key, Gjr(law, omega, alpha, gamma, beta, first_variance), before)
-
-    def egarch(
-        self,
-        key: str,
-        law: Any,
-        mean_log: float,
-        beta: float,
-        alpha: float,
-        gamma: float,
-        centre: float,
-        first_log: float | None = None,
-        before: Sequence[float] | None = None,
-    ) -> Expression:
-        """White shocks whose log variance has the shocks alpha (abs(z) - centre) + gamma z; from a given one or not."""
-        return self._volatile(key, Egarch(law, mean_log, beta, alpha, gamma, centre, first_log), before)
-
-    def stochastic_volatility(
-        self, key: str, law: Any, mean_log: float, phi: float, eta: float, rho: float = 0.0
-    ) -> Expression:
-        """White shocks whose log variance is a Gaussian autoregression, its shocks correlated by rho with z."""
-        return self._volatile(key, Stochastic(law, mean_log, phi, eta, rho), None)
 
     def filtered(
         self,
@@ -288,49 +220,12 @@ class Axis:
     def _given_up(self, noise: Expression, reason: str) -> Expression:
         return opaque(self.space, (noise,), f"{self.name}: {reason}")
 
-    def _past(self, values: Sequence[float] | None) -> Known:
-        """0 from step 0 on, the given values (oldest first) before it, not defined further back."""
-        if values is None:
-            return known.constant(0.0)
-        past = np.array([np.nan, *values, 0.0])
-        return known.whole(
-            ("past", self.name, tuple(values)),
-            lambda steps: past[np.clip(np.asarray(steps) + len(past) - 1, 0, len(past) - 1)],
-            note=f"{self.name} {LEAVES_VARIANCE}",
-            settles=True,
-        )
-
-    def _volatile(self, key: str, process: Volatility, before: Sequence[float] | None) -> Expression:
-        path, settles = (process.variance_path, process.settles) if process.started else (None, 0.0)
-        source = self.space.add(Source(key, GARCH, process.variance, process.law, path, settles, detail=process))
-        noise = self._noise(source, started=process.started)
-        outputs = {"variance": lambda: self._conditional(source, noise)}
-        return Expression(self.space, self._past(before), noise.linear, outputs=outputs)
-
-    def _conditional(self, source: Source, noise: Expression) -> Expression:
-        process = source.detail
-        if process.started:
-            return self._started_variance(source, noise)
-        if not np.isfinite(process.variance):
-            return opaque(self.space, (noise,), f"infinite mean of the variance of {source.key}")
-        return self.process(ConditionalVariance(source, noise), known.constant(process.variance))
-
     def _started_variance(self, source: Source, noise: Expression) -> Expression:
         key, process = source.key, source.detail
         path = known.whole(
             ("variance", key), process.variance_path, note=f"variance of {key}", settles=process.total < 1.0
         )
         return opaque(self.space, (noise,), f"the variance of {key}, which leaves from a given one", path)
-
-    def _variance(self, source: Source) -> Expression:
-        process: Garch = source.detail
-        if process.started:
-            ingredient = Expression(self.space, known.constant(0.0), Linear({At(Base(source, (), True), 0): 1.0}))
-            return self._started_variance(source, ingredient)
-        squares = squares_of(self.space, source)
-        base = self._base(squares, process.persistence, False)
-        form = Linear({At(base, delay): c for delay, c in process.variance_weights.items()})
-        return Expression(self.space, known.constant(process.variance), form)
 
     def _filtered_mean(self, mean: Known, phi, theta, before_x, before_shocks) -> Known:
         if before_x is None:
@@ -349,14 +244,6 @@ def _mean_path_at(x: Expression, steps: np.ndarray) -> np.ndarray:
 def _white(noise: Expression) -> Expression:
     """A noise that is no linear form, as the one white source that stands for it in filters."""
     return replace(noise.hidden("white"), outputs=noise.outputs) if "white" in noise.outputs else noise
-
-
-def squares_of(space: Space, source: Source) -> Source:
-    """The white source v = e^2 - h behind the squares of a garch; one object each."""
-    key = f"{source.key} squared"
-    if key not in space.sources:
-        space.add(Source(key, SQUARES, source.detail.shock_variance, owner=source, detail=source.detail))
-    return space.sources[key]
 
 
 def _trimmed(coefficients: Sequence[float]) -> tuple[float, ...]:
