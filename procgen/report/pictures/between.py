@@ -129,9 +129,9 @@ def _matrix(subjects: Sequence[Subject], pairs: Sequence[_Pair]) -> Chart:
     x = Axis(0.0, float(n), tuple((i + 0.5, t if n <= NAMED else str(i + 1)) for i, t in enumerate(labels)))
     y = Axis(0.0, float(n), tuple((n - 0.5 - i, t if n <= NAMED else str(i + 1)) for i, t in enumerate(labels)))
     numbered = "" if n <= NAMED else " Series are numbered in the order of the spec."
-    known = (
+    says = (
         f"; the furthest seen from stated is off by {max(gaps):.2g}" if gaps else "; what they should be is not known"
     )
-    caption = f"Correlations at the same step{known}.{numbered}"
+    caption = f"Correlations at the same step{says}.{numbered}"
     head = ("first", "second", "stated", "seen")
     return Chart("Correlations between series", caption, x, y, [*cells, *notes], head, rows)
