@@ -220,13 +220,6 @@ class Axis(Volatile):
     def _given_up(self, noise: Expression, reason: str) -> Expression:
         return opaque(self.space, (noise,), f"{self.name}: {reason}")
 
-    def _started_variance(self, source: Source, noise: Expression) -> Expression:
-        key, process = source.key, source.detail
-        path = known.whole(
-            ("variance", key), process.variance_path, note=f"variance of {key}", settles=process.total < 1.0
-        )
-        return opaque(self.space, (noise,), f"the variance of {key}, which leaves from a given one", path)
-
     def _filtered_mean(self, mean: Known, phi, theta, before_x, before_shocks) -> Known:
         if before_x is None:
             if mean.value is None:

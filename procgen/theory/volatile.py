@@ -136,6 +136,13 @@ class Volatile:
         form = Linear({At(base, delay): c for delay, c in process.variance_weights.items()})
         return Expression(self.space, known.constant(process.variance), form)
 
+    def _started_variance(self, source: Source, noise: Expression) -> Expression:
+        key, process = source.key, source.detail
+        path = known.whole(
+            ("variance", key), process.variance_path, note=f"variance of {key}", settles=process.total < 1.0
+        )
+        return opaque(self.space, (noise,), f"the variance of {key}, which leaves from a given one", path)
+
 
 def squares_of(space: Space, source: Source) -> Source:
     """The white source v = e^2 - h behind the squares of a garch; one object each."""
