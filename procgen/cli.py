@@ -155,9 +155,9 @@ def validate(
     stated = None if spec is None else pg.load(spec)
     with progress("reading") as tick:
         verdict = pg.validate(data, stated, false_alarm, columns or None, tick)
+    written = None if report is None else f"report: {verdict.to_html(report)}"
     printed(verdict_json(verdict) if json else verdict.to_text())
-    if report is not None:
-        written = f"report: {verdict.to_html(report)}"
+    if written:
         said(written) if json else printed(f"\n{written}")
     raise typer.Exit({True: 0, False: 1, None: 2}[verdict.agrees])
 
