@@ -13,6 +13,7 @@ from procgen.theory.covariance import convolved, covariance
 from procgen.theory.garch import Garch
 from procgen.theory.linear import At, Base, Linear
 from procgen.theory.sources import Source, Space
+from procgen.theory.transient import square_products
 from procgen.theory.unknown import Unknown
 from procgen.theory.weights import Sided, over_distinct, weights_at
 
@@ -39,20 +40,45 @@ def garch_product(space: Space, source: Source, forms: Sided, t: np.ndarray, s: 
     one shock each, at two steps.
     """
     if source.path is not None:
-        raise Unknown(f"fourth moments of {source.key}, which leaves from a given past")
+        return _started_product(source, forms, t, s)
     covariances = square_covariance(space, source, np.arange(1))
 
     def excess(steps: list[int]) -> float:
         nonlocal covariances
         weights = a, b, c, d = weights_at(forms, steps)
-        if not source.symmetric and not _in_pairs(weights):
-            raise Unknown(f"signs of {source.key} move its variance: an odd product of its shocks has a mean")
+        _refuse_signs(source, weights)
         if len(covariances) < len(a):
             covariances = square_covariance(space, source, np.arange(len(a)))
         paired = sum(_quadratic(p, q, covariances) for p, q in ((a * b, c * d), (a * c, b * d), (a * d, b * c)))
         return paired - 2.0 * float((a * b * c * d).sum()) * (float(covariances[0]) + source.variance**2)
 
     return over_distinct(forms, t, s, excess)
+
+
+def _started_product(source: Source, forms: Sided, t: np.ndarray, s: np.ndarray) -> np.ndarray:
+    """The same where the variance leaves from a given one: S(u, v) depends on both steps."""
+
+    path = source.path
+    assert path is not None
+
+    def excess(steps: list[int]) -> float:
+        weights = weights_at(forms, steps)[:, max(steps) :: -1]  # on the shocks of steps 0, 1, ..
+        _refuse_signs(source, weights)
+        (used,) = np.nonzero(weights.any(axis=0))
+        if not len(used):
+            return 0.0
+        a, b, c, d = weights[:, used]
+        products, means = square_products(source.detail, used), path(used)
+        beyond = products - np.outer(means, means)
+        paired = sum(float(p @ beyond @ q) for p, q in ((a * b, c * d), (a * c, b * d), (a * d, b * c)))
+        return paired - 2.0 * float((a * b * c * d) @ np.diag(products))
+
+    return over_distinct(forms, t, s, excess)
+
+
+def _refuse_signs(source: Source, weights: np.ndarray) -> None:
+    if not source.symmetric and not _in_pairs(weights):
+        raise Unknown(f"signs of {source.key} move its variance: an odd product of its shocks has a mean")
 
 
 def _in_pairs(weights: np.ndarray) -> bool:

@@ -26,6 +26,7 @@ import numpy as np
 from procgen.theory.arma import companion, cross_covariance
 from procgen.theory.powers import existing_orders
 from procgen.theory.recursion import recursed
+from procgen.theory.transient import Moving, kept_products
 
 HIGHEST = 64.0  # moments of h are looked at up to this order
 ROOT_TOLERANCE = 1e-10
@@ -159,6 +160,28 @@ class Garch:
             while np.abs(power).max() > SETTLED:
                 power, steps = power @ power, 2 * steps
         return float(steps)
+
+    def products_from_start(self, steps: np.ndarray) -> np.ndarray:
+        """E e(u)^2 e(v)^2 at all pairs of ascending steps, from the given past."""
+        return kept_products(self, self._moving, steps)
+
+    def _moving(self) -> Moving:
+        p, q = len(self.alpha), max(len(self.beta), 1)
+        fixed, random = np.zeros((p + q - 1, p + q - 1)), np.zeros((p + q - 1, p + q - 1))  # A = fixed + z^2 random
+        fixed[0, : len(self.beta)], fixed[0, q:], random[0, 0] = self.beta, self.alpha[1:], self.alpha[0]
+        for i in (*range(1, q), *range(q + 1, p + q - 1)):
+            fixed[i, i - 1] = 1.0
+        if p > 1:
+            random[q, 0] = 1.0
+        past, squares = (self.past_variances or ())[::-1], self.past_squares[::-1]
+        first = np.array([float(self.variance_path(np.zeros(1))[0]), *past[: q - 1], *squares[: p - 1]])
+        kurtosis, mean = self.law.excess_kurtosis + 3.0, fixed + random
+
+        def squared(m: np.ndarray) -> np.ndarray:
+            return mean @ m @ mean.T + (kurtosis - 1.0) * (random @ m @ random.T)
+
+        constant = self.omega * np.eye(p + q - 1)[0]
+        return Moving(constant, mean, squared, fixed + kurtosis * random, kurtosis, first)
 
     def variance_path(self, steps: np.ndarray) -> np.ndarray:
         """E h(t) at steps >= 0 from the given past: m(t) = omega + sum alpha_i E e(t-i)^2 + sum beta_j m(t-j)."""

@@ -28,6 +28,7 @@ LARGEST_EXPONENT = 600.0
 NEGLIGIBLE = 1e-18
 FAR = 37.0  # standard deviations of a normal: the area beyond is 1e-299
 PANELS = 256
+MOST_STEPS = 256
 
 
 class LogVariance(Volatility):
@@ -79,6 +80,23 @@ class LogVariance(Volatility):
         left = self.beta ** np.asarray(steps, float)
         mean = self.mean_log + (self.first_log - self.mean_log) * left
         return np.exp(mean + self.cumulants(np.ones(1))[0] - self.cumulants(left))
+
+    def products_from_start(self, steps):
+        assert self.first_log is not None
+        if len(steps) > MOST_STEPS:
+            raise Unknown(f"fourth moments from a given log variance are added up over {MOST_STEPS} shocks only")
+        if self.limit <= 2.0:
+            raise Unknown("infinite fourth moment: the exponential of its shocks has no second power")
+        late, early = np.tril_indices(len(steps))
+        gap, left = steps[late] - steps[early], self.beta ** steps.astype(float)
+        k, one = self.beta ** gap.astype(float), self.cumulants(np.ones(1))[0]
+        log = 2.0 * self.mean_log + (left[late] + left[early]) * (self.first_log - self.mean_log)
+        log = log + self.cumulants(1.0 + k) - self.cumulants(left[early] * (1.0 + k)) + one - self.cumulants(k)
+        later = log + self.tilt(self.beta ** np.maximum(gap - 1.0, 0.0))
+        out = np.empty((len(steps), len(steps)))
+        out[late, early] = np.where(gap == 0, (self.law.excess_kurtosis + 3.0) * np.exp(log), np.exp(later))
+        out[early, late] = out[late, early]
+        return out
 
     def variance_covariance(self, lags):
         return self.variance**2 * np.expm1(self._joint(lags))

@@ -101,9 +101,11 @@ class Space:
                 raise Unknown(a.reason)
             if a.kind == PROCESS:
                 raise Unknown(f"{a.detail.name} has a memory of its own")
-            if not np.isfinite(a.variance):
+            if np.isfinite(a.variance):
+                return a.variance
+            if a.path is None or a.detail.total < 1.0:
                 raise Unknown(f"infinite variance of {_named(a)}")
-            return a.variance
+            return float(a.path(np.zeros(1, np.int64))[0])  # it grows from there along its path
         if not self.dependent(a, b):
             return 0.0
         for one in (a, b):

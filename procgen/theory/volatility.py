@@ -16,6 +16,7 @@ from procgen.theory.copula import is_symmetric
 from procgen.theory.garch import HIGHEST, expect, tail_index
 from procgen.theory.processes import Process, Steps
 from procgen.theory.sources import Source
+from procgen.theory.transient import Moving, kept_products
 from procgen.theory.unknown import Unknown
 
 FORGOTTEN = 1e-16
@@ -53,6 +54,10 @@ class Volatility:
 
     def square_covariance(self, lags: Steps) -> np.ndarray:
         """Cov(e(t + lag)^2, e(t)^2) at lags >= 0; Unknown where there is no fourth moment."""
+        raise NotImplementedError
+
+    def products_from_start(self, steps: Steps) -> np.ndarray:
+        """E e(u)^2 e(v)^2 at all pairs of ascending steps, from the given past."""
         raise NotImplementedError
 
     def variance_covariance(self, lags: Steps) -> np.ndarray:
@@ -175,11 +180,23 @@ class Gjr(Volatility):
         with np.errstate(over="ignore"):
             return rest + (self.first - rest) * self.total**steps
 
+    @property
+    def led(self) -> float:
+        """E z^2 c."""
+        return self.beta + self.alpha * (self.law.excess_kurtosis + 3.0) + self.gamma * self.below[1]
+
+    def products_from_start(self, steps):
+        return kept_products(self, self._moving, steps)
+
+    def _moving(self) -> Moving:
+        omega, total, led, first = np.array([[self.omega], [self.total], [self.led], [self.first]])
+        kurtosis = self.law.excess_kurtosis + 3.0
+        return Moving(omega, total[None], lambda m: self.second * m, led[None], kurtosis, first)
+
     def square_covariance(self, lags):
         second = self.variance_square
         kurtosis = self.law.excess_kurtosis + 3.0
-        next_one = self.beta + self.alpha * kurtosis + self.gamma * self.below[1]  # E z^2 c
-        first = self.omega * self.variance + next_one * second - self.variance**2
+        first = self.omega * self.variance + self.led * second - self.variance**2
         later = first * self.total ** np.maximum(lags - 1.0, 0.0)
         return np.where(lags == 0, kurtosis * second - self.variance**2, later)
 
