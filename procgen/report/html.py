@@ -16,7 +16,7 @@ from procgen.report.pictures import gallery as galleries
 from procgen.report.pictures import page
 from procgen.report.pictures.gallery import Gallery
 from procgen.report.pictures.page_style import PAGE
-from procgen.report.pictures.safe import escaped
+from procgen.report.pictures.safe import escaped, many
 from procgen.report.pictures.write import write
 from procgen.report.text import CAUTION, reported
 
@@ -36,11 +36,12 @@ _HEAD = (
     "estimate",
     "std. error",
     "p",
-    "smallest departure found",
+    "smallest found",
     "outcome",
     "in words",
 )
 _FIGURES = (3, 4, 5, 7)  # of _HEAD: columns of numbers
+OPEN = 12  # checks that agree and are not folded away
 MOST_ROWS = 300  # of a table: more would not be read, and weigh more than all pictures
 _CAUTIONS = (
     "Pictures are for looking, the checks are for judging: a band of chance holds 95 times in 100 for each point on "
@@ -76,11 +77,11 @@ def whole_page(gallery: Gallery | None, verdict: Verdict | None = None) -> str:
         "</header><main>",
     ]
     if verdict is not None:
-        parts += [*_found(verdict), *_covered(verdict)]
+        parts += _found(verdict)
     if gallery is not None:
         parts += page.series(gallery, _by_series(verdict))
     if verdict is not None:
-        parts += _tables(verdict)
+        parts += [*_covered(verdict), *_tables(verdict)]
     if gallery is not None:
         parts += page.provenance(gallery)
     elif verdict is not None:
@@ -93,7 +94,7 @@ def _lead(verdict: Verdict) -> Iterator[str]:
     about = verdict.about
     yield f'<p class="verdict {verdict.verdict}">{_TITLES[verdict.verdict]}</p>'
     counts = ", ".join(f"{count} {what}" for what, count in sorted(verdict.counts.items()))
-    size = f"{about['paths']:,} paths × {about['steps']:,} steps. " if "paths" in about else ""
+    size = f"{many(about['paths'], 'path')} × {many(about['steps'], 'step')}. " if "paths" in about else ""
     yield f'<p class="facts">{escaped(verdict.title)}.</p>'
     yield f'<p class="facts">{escaped(size)}{len(verdict.rows)} checks: {escaped(counts)}.</p>'
     yield from (f'<p class="facts">{escaped(line)}.</p>' for line in reported(verdict))
@@ -152,29 +153,34 @@ def _by_series(verdict: Verdict | None) -> dict[str, Sequence[str]]:
 
 
 def _tables(verdict: Verdict) -> Iterator[str]:
-    """Departures and the judged checks open, what was not judged folded away."""
-    judged = [row for row in verdict.rows if row.outcome in ("departs", "agrees")]
+    """Departures and the smallest p open, the other checks and what was not judged folded away."""
+    departs = [row for row in verdict.rows if row.outcome == "departs"]
+    agrees = [row for row in verdict.rows if row.outcome == "agrees"]
     rest = [row for row in verdict.rows if row.outcome not in ("departs", "agrees")]
     yield '<section id="checks"><h2>Checks, the largest disagreement first</h2>'
-    yield from _table(judged)
+    yield from _table([*departs, *agrees[:OPEN]])
+    if agrees[OPEN:]:
+        yield from _folded(f"{len(agrees[OPEN:]):,} more checks that agree", agrees[OPEN:])
     if rest:
-        yield f"<details><summary>{len(rest)} checks that could not be judged, with the reasons</summary>"
-        yield from _table(rest)
-        yield "</details>"
+        yield from _folded(f"{len(rest):,} checks that were not judged, with the reasons", rest)
     yield "</section>"
 
 
+def _folded(summary: str, rows: list[Check]) -> Iterator[str]:
+    yield f"<details><summary>{summary}</summary>"
+    yield from _table(rows)
+    yield "</details>"
+
+
 def _table(rows: list[Check]) -> Iterator[str]:
-    yield '<div class="scroll"><table><thead><tr>'
+    yield '<div class="scroll"><table class="checks"><thead><tr>'
     for place, name in enumerate(_HEAD):
         yield f'<th scope="col"{" class=n" if place in _FIGURES else ""}>{name}</th>'
     yield "</tr></thead><tbody>"
     yield from map(_row, rows[:MOST_ROWS])
     yield "</tbody></table></div>"
-    left = rows[MOST_ROWS:]
-    if left:
-        outcomes = ", ".join(sorted({row.outcome for row in left}))
-        yield f'<p class="facts">{len(left):,} more are not shown here ({outcomes}); validate --json lists all.</p>'
+    if rows[MOST_ROWS:]:
+        yield f'<p class="facts">{len(rows) - MOST_ROWS:,} more are not shown here; validate --json lists all.</p>'
 
 
 def _row(row: Check) -> str:
@@ -197,5 +203,5 @@ def _words(row: Check) -> str:
     """What departs in a sentence; of others what there is to say."""
     if row.outcome != "departs" or row.kind == "structure" or row.what == "values":
         return row.note
-    said = sentence([[row]]).removeprefix(f"{row.series}: ")
+    said = sentence([[row]]).removeprefix(f"{row.series}: ").partition(" (")[0]  # its numbers stand beside it
     return f"{said}; {row.note}" if row.note else said

@@ -12,9 +12,11 @@ from typing import Any
 from procgen.chance.laws import LAWS, Law
 from procgen.report.catalogue import purpose
 from procgen.spec.correlated import FORMS
-from procgen.spec.declare import Body, Schema, mapping, mapping_of, one_or_list
+from procgen.spec.declare import Body, Real, Schema, mapping, mapping_of, one_or_list
 from procgen.spec.entries import REPLACED, SPREAD
+from procgen.spec.parameters import DRAWN
 from procgen.spec.reader import HEAD, SERIES
+from procgen.spec.tables import LOOKUP, TABLE
 from procgen.spec.timegrid import TIME
 from procgen.terms import catalogue
 
@@ -30,6 +32,7 @@ def schema() -> Schema:
         "reuse": {"description": "a home for YAML anchors, otherwise ignored"},
         "shared": named({"anyOf": [BODY, mapping({"of": BODY}, ["of"])]}),
         "series": named({"anyOf": [BODY, mapping_of(SERIES)]}),
+        "parameters": named({"anyOf": declared()}),
         "correlation": one_or_list({"anyOf": [mapping_of(form) for form in FORMS.values()]}, 0),
     }
     return {
@@ -40,9 +43,15 @@ def schema() -> Schema:
             "name": {"type": "string", "pattern": "^[A-Za-z_][A-Za-z0-9_]*$"},
             "body": one_or_list({"$ref": "#/$defs/entry"}),
             "entry": entry(),
+            "varying": {"anyOf": [*declared(), *(mapping({form: NAME}, [form]) for form in ("parameter", "column"))]},
             "law": {"anyOf": [law for name in LAWS for law in ways(LAWS[name])]},
         },
     }
+
+
+def declared() -> list[Schema]:
+    """The ways to write a number that varies: a draw, or a table."""
+    return [mapping_of(DRAWN), mapping({TABLE: mapping_of(LOOKUP)}, [TABLE])]
 
 
 def named(body: Schema) -> Schema:
@@ -55,7 +64,7 @@ def entry() -> Schema:
     kinds = {kind: {"description": term.purpose, **term_schema(term)} for kind, term in catalogue().items()}
     beside = {
         "as": {"description": "label of the term; its kind when absent", **NAME},
-        "times": {"description": "factor of the term", "type": "number"},
+        "times": {"description": "factor of the term", **Real().schema()},
     }
     return {**mapping(kinds | beside), "oneOf": [{"required": [kind]} for kind in kinds]}
 

@@ -9,29 +9,50 @@ from typing import Any
 
 import numpy as np
 
+from procgen.report.correlogram import correlogram, scaled
 from procgen.report.equations import equations
 from procgen.spec.model import Spec
 from procgen.theory import SeriesTheory, Theory
+from procgen.theory.series import FREQUENCIES, HORIZONS
 
 WIDTH = 100
 DUST = 1e-13  # of the variance
-MEMORY = ("autocovariance", "autocorrelation")
+WIDEST = 90  # lags in a correlogram
 WANTED = ("mean", "variance", "autocovariance")  # reasons of others are told for stationary series only
 
 
-def theory_json(spec: Spec, theory: Theory, at: Sequence[int] | None, lags: int) -> str:
+def theory_json(
+    spec: Spec,
+    theory: Theory,
+    at: Sequence[int] | None,
+    lags: int,
+    frequencies: Sequence[float] | None = None,
+    horizons: Sequence[int] | None = None,
+) -> str:
     """All moments as JSON, at the steps `at` and up to the lag `lags`."""
-    return json.dumps(theory.as_dict(at or some(spec.time.steps), lags), ensure_ascii=False)
+    return json.dumps(_told(spec, theory, at, lags, frequencies, horizons), ensure_ascii=False)
 
 
-def theory_text(spec: Spec, theory: Theory, at: Sequence[int] | None, lags: int) -> str:
-    """Equations, verdicts and moments, for a person to read."""
-    told = theory.as_dict(at or some(spec.time.steps), [0, *some(lags + 1)[1:]])
+def theory_text(
+    spec: Spec,
+    theory: Theory,
+    at: Sequence[int] | None,
+    lags: int,
+    frequencies: Sequence[float] | None = None,
+    horizons: Sequence[int] | None = None,
+) -> str:
+    """Equations, verdicts and moments, for a person to read; spectral densities where frequencies are given."""
+    told = _told(spec, theory, at, [0, *some(lags + 1)[1:]], frequencies or (), horizons)
     lines = [head(spec), *equations(spec, WIDTH)]
     for name, facts in told["series"].items():
-        lines += ["", *_series(theory[name], facts, spec.series[name].unit)]
+        lines += ["", *_series(theory[name], facts, spec.series[name].unit, lags)]
     lines += _cross(told["cross"]) + _correlated(told["correlation"])
     return "\n".join(lines)
+
+
+def _told(spec, theory, at, lags, frequencies, horizons) -> dict[str, Any]:
+    chosen = FREQUENCIES if frequencies is None else frequencies
+    return theory.as_dict(at or some(spec.time.steps), lags, chosen, horizons or HORIZONS)
 
 
 def some(count: int) -> list[int]:
@@ -55,27 +76,95 @@ def _many(count: int, what: str) -> str:
     return f"{count:,} {what}{'' if count == 1 else 's'}"
 
 
-def _series(theory: SeriesTheory, facts: dict[str, Any], unit: str | None) -> list[str]:
+def _series(theory: SeriesTheory, facts: dict[str, Any], unit: str | None, lags: int) -> list[str]:
     lines = [f"{theory.name}{f' ({unit})' if unit else ''}: {facts['stationarity']['verdict']}"]
     lines += _wrapped(reason for reason in facts["stationarity"]["reasons"] if not _said_below(reason, facts))
     lines += _table("step", facts["steps"], [("mean", facts["mean"]), ("variance", facts["variance"])])
-    lines += _memory(theory, facts["steps"], facts["autocovariance"]["lags"])
-    if facts["excess_kurtosis"] is not None and abs(facts["excess_kurtosis"]) > 1e-12:
-        lines.append(f"  excess kurtosis {number(facts['excess_kurtosis'])}")
-    elif facts["gaussian"] and any(facts["variance"] or []):
-        lines.append("  jointly Gaussian")
+    lines += _memory(theory, facts)
+    lines += _spectrum(facts["spectral_density"])
+    if _remembers(facts):
+        lines += _ahead(facts["forecast_variance"])
+        lines += _averaged(theory, facts) + _correlogram(theory, lags)
+    lines += _law(facts)
     lines += _wrapped(_unknown(facts))
     if "condition" in facts:
         lines.append(f"  condition number {facts['condition']:.2g}: expect relative errors of 1e-16 times that")
     return lines
 
 
-def _memory(theory: SeriesTheory, steps: Sequence[int], lags: Sequence[int]) -> list[str]:
+def _memory(theory: SeriesTheory, facts: dict[str, Any]) -> list[str]:
     """Autocovariances from step 0, or from the middle of the steps shown where they change with the step."""
+    steps, lags = facts["steps"], facts["autocovariance"]["lags"]
     start = 0 if theory.stationarity.covariance_stationary else steps[len(steps) // 2]
-    found = (theory.autocovariance(lags, start), theory.autocorrelation(lags, start))
-    rows = [(name, None if v is None else _without_dust(v)) for name, v in zip(MEMORY, found, strict=True)]
+    found = [("autocovariance", theory.autocovariance(lags, start))]
+    found += [("autocorrelation", theory.autocorrelation(lags, start))]
+    if start == 0 and _remembers(facts):
+        found += [("partial", theory.partial_autocorrelation(lags))]
+    if start == 0 and not facts["gaussian"]:
+        found += [("of squares", theory.autocorrelation_of_squares(lags))]
+    rows = [(name, None if v is None else _without_dust(v)) for name, v in found]
     return _table("lag" if start == 0 else f"lag, from step {start}", lags, rows)
+
+
+def _remembers(facts: dict[str, Any]) -> bool:
+    """Whether anything is left of a value at later steps."""
+    values = facts["autocovariance"]["values"]
+    return values is not None and any(abs(v) > DUST * values[0] for v in values[1:])
+
+
+def _spectrum(facts: dict[str, Any]) -> list[str]:
+    return _table("cycles a step", facts["frequencies"], [("spectral density", facts["values"])])
+
+
+def _ahead(facts: dict[str, Any]) -> list[str]:
+    """Variances of forecast errors; those that all parts' pasts would leave, where these tell more."""
+    values, parts = facts["values"], facts["given_parts"]
+    same = values is None or parts is None or np.allclose(values, parts, rtol=1e-9, atol=0.0)
+    rows = [("error variance", values), ("seeing all parts", None if same and values else parts)]
+    return _table("steps ahead", facts["horizons"], rows)
+
+
+def _averaged(theory: SeriesTheory, facts: dict[str, Any]) -> list[str]:
+    """What a mean of many steps is worth."""
+    if not theory.stationarity.covariance_stationary:
+        return []
+    curve = facts["variance_of_mean"]
+    spreads = None if curve["values"] is None else np.sqrt(curve["values"]).tolist()
+    return _table("steps averaged", curve["counts"], [("sd of the mean", spreads)]) + _wrapped(_worth(facts))
+
+
+def _worth(facts: dict[str, Any]) -> list[str]:
+    said = []
+    if facts["half_life"] is not None:
+        said.append(f"half-life {facts['half_life']} step{'' if facts['half_life'] == 1 else 's'}")
+    whole = facts["long_run_variance"]
+    if whole is not None:
+        said.append(f"long-run variance {number(whole)}")
+        variance = facts["autocovariance"]["values"][0]
+        if whole > DUST * variance:
+            share = variance / whole
+            worth = f"n/{number(float(f'{1 / share:.3g}'))}" if share < 1 else f"{number(float(f'{share:.3g}'))} n"
+            said[-1] += f": a mean of n steps tells as much as {worth} independent values"
+    return ["; ".join(said)] if said else []
+
+
+def _correlogram(theory: SeriesTheory, lags: int) -> list[str]:
+    values = theory.autocorrelation(range(1, min(lags, WIDEST) + 1)) if lags else None
+    if values is None or not theory.stationarity.covariance_stationary:
+        return []
+    drawn = correlogram(values.tolist())
+    return ["  autocorrelation", *scaled(drawn)] if drawn else []
+
+
+def _law(facts: dict[str, Any]) -> list[str]:
+    lines = []
+    if facts["excess_kurtosis"] is not None and abs(facts["excess_kurtosis"]) > 1e-12:
+        lines.append(f"excess kurtosis {number(facts['excess_kurtosis'])}")
+    elif facts["gaussian"] and any(facts["variance"] or []):
+        lines.append("jointly Gaussian")
+    if isinstance(facts["highest_moment"], float):
+        lines.append(f"moments below order {number(facts['highest_moment'])} exist")
+    return _wrapped(["; ".join(lines)]) if lines else []
 
 
 def _without_dust(values: np.ndarray) -> list[float]:

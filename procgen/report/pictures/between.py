@@ -93,7 +93,7 @@ class _Pair:
         if np.isfinite(error).all():
             how = "from the spread between paths" if self.pooled else "as for independent pairs"
             compared.around(NORMAL * error, how)
-        return compared.chart(f"{short(self.a.name, 20)} at a later step, with {short(self.b.name, 20)}")
+        return compared.chart(f"{short(self.a.name, 20)} at t + lag with {short(self.b.name, 20)} at t")
 
 
 def _matrix(subjects: Sequence[Subject], pairs: Sequence[_Pair]) -> Chart:

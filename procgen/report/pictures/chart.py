@@ -103,6 +103,7 @@ class Chart:
     marks : drawn in their order
     head, rows : the numbers behind it, as a table
     zero : whether the line y = 0 is drawn
+    high : its height, 48 being its width
     """
 
     title: str
@@ -113,6 +114,7 @@ class Chart:
     head: tuple[str, ...] = ()
     rows: Sequence[Sequence[str]] = field(default_factory=tuple)
     zero: bool = False
+    high: float = 28.0
 
     @property
     def key(self) -> list[Mark]:

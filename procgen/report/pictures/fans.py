@@ -2,16 +2,18 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator, Sequence
 from itertools import pairwise
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.checks.words import number
 from procgen.report.pictures.chart import Axis, Band, Cells, Chart, Line, Mark, Note
 from procgen.report.pictures.safe import short
-from procgen.report.pictures.sample import STRIP
-from procgen.report.pictures.seen import ENOUGH, quantiles
+from procgen.report.pictures.sample import Sample
+from procgen.report.pictures.seen import quantiles
 from procgen.report.pictures.subject import LEVELS, Subject, some, texts
 from procgen.report.pictures.ticks import axis, step_axis
 
@@ -19,7 +21,8 @@ FULL = 370  # steps up to which a whole range is shown one by one: a year of day
 BEGINNING = 240  # the same of the beginning of a longer one
 BUCKETS = 160  # points of a longer range
 LOOKS = 8  # steps of a bucket at which its bands are taken
-PATHS, FEW = 4, 12  # paths that are drawn beside bands of the sample, and without them
+PATHS, FEW = 4, 12  # paths that are drawn beside curves of the sample, and without them
+CURVES = 50  # paths from which their quantiles make a curve
 MOST_PARTS = 8
 
 
@@ -41,7 +44,7 @@ def fan(subject: Subject, steps: int, title: str) -> Chart:
     if stated is not None:
         marks += _bands(at, stated, kind)
     values = subject.values[:, :steps]
-    seen = quantiles(values, LEVELS) if subject.paths >= ENOUGH else None
+    seen = quantiles(values, LEVELS) if subject.paths >= CURVES else None
     shown = values[: PATHS if seen is not None else FEW]
     marks += [Line(at, row, "path", _paths(len(shown)) if i == 0 else "") for i, row in enumerate(shown)]
     if seen is not None:
@@ -68,7 +71,7 @@ def overview(subject: Subject) -> Chart:
         stated = _widest(stated, at.shape)
         marks.append(Band(middle, stated[0], stated[1], "stated", _band_name(kind)))
     seen = None
-    if subject.paths >= ENOUGH:
+    if subject.paths >= CURVES:
         seen = _widest(quantiles(subject.values[:, at.ravel()], outer), at.shape)
     shown = subject.values[:2]
     for i, row in enumerate(shown):
@@ -90,53 +93,56 @@ def overview(subject: Subject) -> Chart:
     )
 
 
-def strips(subject_steps: int, grid: object, parts: Mapping[str, NDArray], first_path: int) -> Chart:
-    """What one path is made of: each revealed term or output in a lane of its own, states as blocks."""
-    names = list(parts)[:MOST_PARTS]
-    steps = min(subject_steps, STRIP, BEGINNING, *(len(parts[name]) for name in names))
-    at = np.arange(steps)
+def strips(sample: Sample) -> Chart | None:
+    """What one path is made of: each revealed term or output in a lane of its own, states as blocks.
+
+    None where nothing was revealed that moves.
+    """
+    moving = {name: row for name, row in sample.parts.items() if float(np.ptp(row[np.isfinite(row)])) > 0.0}
+    names = list(moving)[:MOST_PARTS]
+    if not names:
+        return None
+    steps = min(BEGINNING, *(len(moving[name]) for name in names))
+    at, states = np.arange(steps), _states(sample.spec, names)
     marks: list[Mark] = []
-    ticks: list[tuple[float, str]] = []
     rows = []
     for lane, name in enumerate(reversed(names)):
-        values = np.asarray(parts[name], float)[:steps]
-        low, high = np.nanmin(values), np.nanmax(values)
-        states = np.unique(values[np.isfinite(values)])
-        if 1 < len(states) <= 6 and bool((states == np.rint(states)).all()):
-            marks.append(Cells(_blocks(values, states, lane), "seen"))
+        values = np.asarray(moving[name], float)[:steps]
+        low, high = float(np.nanmin(values)), float(np.nanmax(values))
+        if name in states:
+            marks.append(Cells(_blocks(values, len(states[name]), lane), "seen"))
+            says = "from below " + ", ".join(states[name])
         else:
-            span = float(high - low) or 1.0
-            marks.append(Line(at, lane + 0.06 + 0.72 * (values - low) / span, "seen"))
-        ticks.append((lane + 0.4, ""))
-        marks.append(Note(0.0, lane + 0.84, f"{short(name, 34)}: {_span(low, high)}"))
-        rows.append((name, *(f"{x:.6g}".replace("-", "−") for x in (low, values.mean(), high))))
-    more = f" ({len(parts) - len(names)} more are not shown)" if len(parts) > len(names) else ""
+            marks.append(Line(at, lane + 0.04 + 0.6 * (values - low) / (high - low or 1.0), "seen"))
+            says = f"{number(low, 4)} to {number(high, 4)}"
+        marks.append(Note(0.0, lane + 0.76, short(f"{name}: {says}", 60)))
+        rows.append((name, number(low), number(float(np.nanmean(values))), number(high)))
+    left = len(moving) - len(names)
     caption = (
-        f"What path {first_path} is made of over its first {steps} steps, each part on a scale of its own from its "
-        f"lowest to its highest value; states are blocks, the lowest number at the bottom{more}."
+        f"What path {sample.first_path} is made of over its first {steps} steps, each part on a scale of its own; "
+        "parts that never move are left out" + (f", and {left} more." if left else ".")
     )
-    return Chart(
-        "Parts of one path",
-        caption,
-        step_axis(grid, 0, steps - 1),
-        Axis(0.0, float(len(names)), tuple(ticks)),
-        marks,
-        ("part", "lowest", "mean", "highest"),
-        rows[::-1],
-    )
+    x, y = step_axis(sample.spec.time, 0, steps - 1), Axis(0.0, float(len(names)), ())
+    head = ("part", "lowest", "mean", "highest")
+    return Chart("Parts of one path", caption, x, y, marks, head, rows[::-1], high=6.0 + 5.0 * len(names))
 
 
-def _span(low: float, high: float) -> str:
-    return f"{low:.4g}".replace("-", "−") + ("" if low == high else f" to {high:.4g}".replace("-", "−"))
+def _states(spec: Any, names: Sequence[str]) -> dict[str, tuple[str, ...]]:
+    """The names of the states of each part that gives the number of one."""
+    from procgen.terms.graph import build
+    from procgen.terms.regimes import states_of
+
+    graph = build(spec)
+    found = {name: states_of(graph.resolve(name)) for name in names}
+    return {name: states for name, states in found.items() if states}
 
 
-def _blocks(values: NDArray, states: NDArray, lane: int) -> NDArray:
+def _blocks(values: NDArray, states: int, lane: int) -> NDArray:
     """Runs of one state as cells, a row of the lane for each state."""
     edges = np.flatnonzero(np.diff(values) != 0) + 1
     begin, end = np.concatenate([[0], edges]), np.concatenate([edges, [len(values)]])
-    row = np.searchsorted(states, values[begin])
-    height = 0.72 / len(states)
-    low = lane + 0.06 + row * height
+    height = 0.62 / states
+    low = lane + 0.04 + values[begin] * height
     return np.column_stack([begin - 0.5, end - 0.5, low, low + 0.9 * height])
 
 

@@ -75,8 +75,9 @@ def _gallery(sample: Sample, record: Sequence[tuple[str, str]], suspects: Sequen
     every = subjects(sample, known)
     sections = tuple(Section(subject, tuple(_charts(subject))) for subject in every)
     shared = list(between.between(every, known, suspects))
-    if sample.parts:
-        shared.append(fans.strips(sample.steps, sample.spec.time, sample.parts, sample.first_path))
+    parts = fans.strips(sample)
+    if parts is not None:
+        shared.append(parts)
     return Gallery(sample, known, sections, tuple(shared), tuple(record))
 
 

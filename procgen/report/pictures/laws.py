@@ -7,6 +7,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.checks.words import number
 from procgen.report.pictures.chart import Axis, Band, Chart, Dots, Line, Mark, bars
 from procgen.report.pictures.seen import (
     ENOUGH,
@@ -29,8 +30,8 @@ def variance(subject: Subject) -> Chart | None:
     stated = subject.stated.variance(line)
     at = some(subject.steps, LOOKED_AT)
     enough = subject.paths > 2
-    if stated is None and not enough:
-        return None
+    if not enough and (stated is None or float(np.ptp(stated)) <= 1e-9 * float(stated.max())):
+        return None  # a level line alone is not worth a figure
     marks: list[Mark] = [] if stated is None else [Line(line, stated, "stated", "stated")]
     head: list[str] = ["step"]
     columns: list[Any] = [[str(t) for t in at]]
@@ -46,9 +47,13 @@ def variance(subject: Subject) -> Chart | None:
     caption = _variance_caption(subject, seen, truth, (low, high) if seen is not None else None)
     tops = [x[np.isfinite(x)] for x in (stated, seen, high if seen is not None else None) if x is not None]
     y = axis(0.0, 1.04 * max((float(t.max()) for t in tops if len(t)), default=1.0), most=5)
-    unit = f", {subject.unit}²" if subject.unit else ""
-    x = step_axis(subject.grid, 0, subject.steps - 1)
+    unit = f", {_squared(subject.unit)}" if subject.unit else ""
+    x = step_axis(subject.grid, 0, subject.steps - 1, room=0.012)
     return Chart(f"Variance against the step{unit}", caption, x, y, marks, tuple(head), texts(*columns))
+
+
+def _squared(unit: str) -> str:
+    return f"{unit}²" if unit.isalpha() else f"({unit})²"
 
 
 def _variance_caption(subject: Subject, seen: Any, truth: Any, ends: Any) -> str:
@@ -130,7 +135,8 @@ def quantile_plot(subject: Subject) -> Chart | None:
         inside = (found >= low - room) & (found <= high + room)
         caption = f"{share(inside)} points shown lie within what chance allows each of them ({look.where})"
     y = axis(float(min(found.min(), middle.min())), float(max(found.max(), middle.max())), most=5, room=0.03)
-    x = axis(float(middle.min()), float(middle.max()), f"stated quantile{look.unit}", room=0.03)
+    counted = "stated quantile" if name == "stated" else "quantile of a normal law"
+    x = axis(float(middle.min()), float(middle.max()), counted + look.unit, room=0.03)
     columns = [[str(k) for k in ranks], middle, low, high, found]
     head = ("rank", "stated", "from", "to", "seen")
     pick = some(len(ranks), 24)
@@ -208,11 +214,9 @@ class _Look:
         low, high = (float(law.ppf(p)) for p in (0.05, 0.95))
         room = self.subject.grain / 2
         inside = 100.0 * float(((known >= low - room) & (known <= high + room)).mean()) if len(known) else 0.0
-        return (
-            f"{inside:.1f} % of the values lie between {low:.5g} and {high:.5g}, where 90 % are stated to be.".replace(
-                "-", "−"
-            )
-        )
+        ends = f"{number(low)} and {number(high)}"
+        chance = f", give or take {196 * np.sqrt(0.09 / len(known)):.1f}" if self.independent and len(known) else ""
+        return f"{inside:.1f} % of the values lie between {ends}, where 90 % are stated to be{chance}."
 
 
 class _Shifted:

@@ -50,7 +50,7 @@ def _heading(section: Section, found: Sequence[str]) -> Iterator[str]:
     if note:
         yield f'<p class="facts">{escaped(note)}</p>'
     verdict, reasons = subject.stated.theory.stationarity
-    yield f"<p>Stated: {escaped(verdict)}. {escaped('; '.join(reasons))}.</p>"
+    yield f"<p>Stated: {escaped('; '.join([verdict, *reasons]))}.</p>"
     if found:
         yield '<ul class="found">'
         yield from (f"<li>{escaped(line)}</li>" for line in found)

@@ -15,7 +15,8 @@ h2 { font-size: 1.45rem; line-height: 1.2; margin: 0 0 .5rem; }
 h3 { font: 600 .95rem/1.35 SANS; margin: 0 0 .35rem; }
 p { margin: .35rem 0; max-width: 52rem; }
 .verdict { font-size: 1.35rem; line-height: 1.25; margin: .7rem 0 .5rem; font-weight: 600; }
-.agrees { color: var(--good); } .departs { color: var(--bad); } .untestable, .reported { color: var(--open); }
+.verdict.agrees, td.agrees { color: var(--good); } .verdict.departs, td.departs { color: var(--bad); }
+.verdict.untestable, td.untestable, td.reported { color: var(--open); }
 .facts { color: var(--soft); font-size: .95rem; }
 nav ul { display: flex; flex-wrap: wrap; gap: .2rem 1.1rem; margin: .8rem 0 0; padding: 0; list-style: none;
   font: .9rem/1.6 SANS; }
@@ -44,7 +45,8 @@ figure table { font-size: 12px; width: auto; }
 th, td { padding: .3rem .6rem; text-align: left; vertical-align: top; border-bottom: 1px solid var(--line); }
 th { color: var(--soft); font-weight: 600; }
 td.n, th.n { text-align: right; white-space: nowrap; }
-td.note { min-width: 15rem; color: var(--soft); overflow-wrap: anywhere; }
+.checks td:nth-child(2) { min-width: 9rem; } .checks td:nth-child(3) { min-width: 7rem; }
+.checks th.n { white-space: normal; } td.note { min-width: 12rem; color: var(--soft); overflow-wrap: anywhere; }
 td.p { min-width: 6.5rem; white-space: nowrap; }
 .bar { display: inline-block; height: .55rem; background: var(--stated); margin-right: .4rem; }
 tr.departs .bar { background: var(--alarm); }

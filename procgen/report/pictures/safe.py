@@ -21,6 +21,11 @@ def escaped(text: object) -> str:
     return escape(visible(text), quote=True)
 
 
+def many(count: int, what: str) -> str:
+    """The count with its noun, such as 1 path or 1,000 paths."""
+    return f"{count:,} {what}{'' if count == 1 else 's'}"
+
+
 def short(text: str, most: int) -> str:
     """The text, or its beginning and an ellipsis, in at most `most` letters."""
     return text if len(text) <= most else text[: most - 1] + "…"

@@ -9,6 +9,8 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.report.pictures.safe import many
+
 LIMIT = 1 << 25  # values of all series together that are held: 268 MB
 DRAWN_LIMIT = 1 << 21  # the same for paths that are drawn for a picture only
 DRAWN_PATHS = 200
@@ -53,9 +55,9 @@ class Sample:
     def says(self) -> str:
         """Which paths and steps the pictures show."""
         if self.drawn:
-            what = f"{_many(self.paths, 'path')} drawn for this picture, of the {self.all_paths:,} of the spec"
+            what = f"{many(self.paths, 'path')} drawn for this picture, of the {self.all_paths:,} of the spec"
         elif self.paths < self.all_paths:
-            what = f"the first {_many(self.paths, 'path')} of {self.all_paths:,}"
+            what = f"the first {many(self.paths, 'path')} of {self.all_paths:,}"
         else:
             what = "the only path" if self.paths == 1 else f"all {self.paths:,} paths"
         some = f", the first {self.steps:,} of {self.all_steps:,} steps" if self.steps < self.all_steps else ""
@@ -137,7 +139,3 @@ def _filled(blocks: Blocks, names: Sequence[str], paths: tuple[int, int], steps:
         read = max(1, int(np.isfinite(out[names[0]]).any(axis=1).sum()))
         out = {name: values[:read] for name, values in out.items()}
     return out, note
-
-
-def _many(count: int, what: str) -> str:
-    return f"{count:,} {what}{'' if count == 1 else 's'}"

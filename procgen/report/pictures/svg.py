@@ -13,8 +13,8 @@ from procgen.report.pictures.chart import Band, Cells, Chart, Dots, Line, Mark, 
 from procgen.report.pictures.safe import escaped, short, visible
 from procgen.report.pictures.style import FIGURE, variables
 
-WIDE, HIGH = 4800, 2800  # tenths of a unit
-LEFT, RIGHT, BOTTOM = 620, 4700, 2420
+WIDE = 4800  # tenths of a unit
+LEFT, RIGHT, BELOW = 620, 4700, 380
 LETTER = 78  # mean width of a letter of the key, where it is set largest
 KEY, ROW = 60, 190  # where a row of the key begins, and its height
 FAR = 20_000  # how far beyond the frame a coordinate may lie: farther changes nothing that is seen
@@ -24,7 +24,7 @@ def figure(chart: Chart, name: str) -> str:
     """The chart as an svg element for a page; `name` must be unique there, and safe."""
     return "".join(
         [
-            f'<svg class="fig" viewBox="0 0 {WIDE} {HIGH}" role="img" aria-labelledby="{name}-t {name}-d">',
+            f'<svg class="fig" viewBox="0 0 {WIDE} {_high(chart)}" role="img" aria-labelledby="{name}-t {name}-d">',
             f'<title id="{name}-t">{escaped(chart.title)}</title><desc id="{name}-d">{escaped(chart.caption)}</desc>',
             *_drawn(chart, name),
             "</svg>",
@@ -49,7 +49,7 @@ def poster(title: str, lines: Sequence[str], groups: Sequence[tuple[str, Sequenc
             y += 280
             for column, chart in enumerate(row):
                 out += _placed(chart, f"p{g}-{first + column}", 300 + column * (WIDE + 400), y)
-            y += HIGH + 160 * max(len(_caption(chart)) for chart in row) + 80
+            y += max(_high(chart) + 160 * len(_caption(chart)) for chart in row) + 80
     width, height = 2 * WIDE + 1000, y + 300
     return "\n".join(
         [
@@ -82,8 +82,12 @@ def _placed(chart: Chart, name: str, x: int, y: int) -> Iterator[str]:
     yield from _drawn(chart, name)
     yield "</g></g>"
     for i, line in enumerate(_caption(chart)):
-        yield f'<text x="0" y="{HIGH + 190 + 160 * i}">{escaped(line)}</text>'
+        yield f'<text x="0" y="{_high(chart) + 190 + 160 * i}">{escaped(line)}</text>'
     yield "</g>"
+
+
+def _high(chart: Chart) -> int:
+    return round(100 * chart.high)
 
 
 def _caption(chart: Chart) -> list[str]:
@@ -97,14 +101,15 @@ class _Frame:
         self.chart = chart
         self.key = list(_key_places(chart.key))
         self.top = 120 + ROW * (1 + max((row for _, _, row in self.key), default=-1))
+        self.bottom = _high(chart) - BELOW
         self.across = (RIGHT - LEFT) / (chart.x.high - chart.x.low)
-        self.up = (BOTTOM - self.top) / (chart.y.high - chart.y.low)
+        self.up = (self.bottom - self.top) / (chart.y.high - chart.y.low)
 
     def x(self, values: ArrayLike) -> NDArray[np.float64]:
         return _bounded(LEFT + (np.asarray(values, float) - self.chart.x.low) * self.across)
 
     def y(self, values: ArrayLike) -> NDArray[np.float64]:
-        return _bounded(BOTTOM - (np.asarray(values, float) - self.chart.y.low) * self.up)
+        return _bounded(self.bottom - (np.asarray(values, float) - self.chart.y.low) * self.up)
 
 
 def _bounded(values: NDArray) -> NDArray[np.float64]:
@@ -115,7 +120,7 @@ def _drawn(chart: Chart, name: str) -> Iterator[str]:
     frame = _Frame(chart)
     yield from _key(frame)
     yield from _axes(chart, frame)
-    size = f'width="{RIGHT - LEFT}" height="{BOTTOM - frame.top}"'
+    size = f'width="{RIGHT - LEFT}" height="{frame.bottom - frame.top}"'
     yield f'<clipPath id="{name}-c"><rect x="{LEFT}" y="{frame.top}" {size}/>'
     yield f'</clipPath><g clip-path="url(#{name}-c)">'
     for mark in chart.marks:
@@ -134,16 +139,16 @@ def _axes(chart: Chart, frame: _Frame) -> Iterator[str]:
         yield f'<path class="grid" d="{"".join(lines)}"/>'
     for value, text in chart.y.ticks:
         yield f'<text x="{LEFT - 60}" y="{frame.y(value) + 42:.0f}" text-anchor="end">{escaped(text)}</text>'
-    marks = [f"M{x:.0f} {BOTTOM}v45" for x in frame.x([v for v, _ in chart.x.ticks])]
+    marks = [f"M{x:.0f} {frame.bottom}v45" for x in frame.x([v for v, _ in chart.x.ticks])]
     zero = f"M{LEFT} {frame.y(0.0):.0f}H{RIGHT}" if chart.zero else ""
-    yield f'<path class="frame" d="M{LEFT} {BOTTOM}H{RIGHT}{"".join(marks)}{zero}"/>'
+    yield f'<path class="frame" d="M{LEFT} {frame.bottom}H{RIGHT}{"".join(marks)}{zero}"/>'
     for value, text in chart.x.ticks:
         x = float(frame.x(value))
         anchor = "end" if x > RIGHT - 150 else "middle"
         x = min(x, RIGHT + 90) if anchor == "end" else x
-        yield f'<text x="{x:.0f}" y="{BOTTOM + 175}" text-anchor="{anchor}">{escaped(text)}</text>'
+        yield f'<text x="{x:.0f}" y="{frame.bottom + 175}" text-anchor="{anchor}">{escaped(text)}</text>'
     if chart.x.label:
-        yield f'<text x="{RIGHT}" y="{BOTTOM + 345}" text-anchor="end">{escaped(chart.x.label)}</text>'
+        yield f'<text x="{RIGHT}" y="{frame.bottom + 345}" text-anchor="end">{escaped(chart.x.label)}</text>'
 
 
 def _key_places(marks: Sequence[Mark]) -> Iterator[tuple[Mark, int, int]]:
@@ -218,6 +223,7 @@ def _dots(mark: Dots, frame: _Frame) -> Iterator[str]:
 
 def _cells(mark: Cells, frame: _Frame) -> Iterator[str]:
     corners = np.asarray(mark.corners, float).reshape(-1, 4)
+    corners = corners[np.isfinite(corners).all(axis=1)]
     x0, x1, y0, y1 = frame.x(corners[:, 0]), frame.x(corners[:, 1]), frame.y(corners[:, 2]), frame.y(corners[:, 3])
     shapes = [f"M{a:.0f} {low:.0f}H{b:.0f}V{high:.0f}H{a:.0f}z" for a, b, low, high in zip(x0, x1, y0, y1, strict=True)]
     if mark.strength is None:
