@@ -16,7 +16,7 @@ if TYPE_CHECKING:
 
 _WHOLE_LAW = ("law", "shocks: distribution function", "shocks: within the law's ends", "share below")
 _PRODUCTS = ("shocks: autocorrelation", "shocks: neighbouring paths", "shocks: correlation between series")
-_SIZES = ("shocks: variance", "shocks: spread score", "shocks: spread by step")
+_SIZES = ("shocks: variance", "shocks: spread score")
 _SCORE = 1.5  # a spread score of s is a log variance of about 1.5 s, for laws from Laplace to normal
 _LIKE = 0.5  # share of the shocks' log variance that the values' must show to be called a matter of spread
 
@@ -62,7 +62,7 @@ def _of_series(rows: Sequence[Check], sizes: Mapping[str, float]) -> Groups:
 
 def _gain(row: Check, sizes: Mapping[str, float]) -> float:
     if row.log_p is None:
-        return math.inf
+        return 0.0 if row.what in _WHOLE_LAW else math.inf
     if row.what in _PRODUCTS:
         return -row.log_p / math.prod(max(1.0, sizes.get(name, 1.0)) for name in row.series.split(" ~ "))
     return -row.log_p
@@ -94,7 +94,8 @@ def _behind_spread(rows: Sequence[Check], kinds: Mapping[str, list[Check]]) -> s
     stated = {row.theory for row in rows if row.what == "variance"}
     behind = max(("memory", "clustering"), key=lambda kind: _top(kinds, kind))
     moved = _moved(rows, "variance over steps")
-    if not shocks or moved is None or not _one_value(stated) or behind not in kinds:
+    in_values = not kinds["spread"][0].what.startswith("shocks: ")
+    if in_values or not shocks or moved is None or not _one_value(stated) or behind not in kinds:
         return None
     return behind if abs(moved) < _LIKE * _log_variance(shocks[0]) else None
 

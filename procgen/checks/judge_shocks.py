@@ -135,6 +135,11 @@ def _law(series: str, sums: ShockSums) -> Iterator[Check]:
     yield Check.of(series, "shocks: shape of the law", "all steps", "law", finding)
     gap = judge.kolmogorov(largest_gap(sums.counts), sums.n)
     yield Check.of(series, "shocks: distribution function", "all steps", "law", gap)
+    if sums.scores.bounded:
+        fault = f"{sums.outside} shocks lie beyond the ends of the stated law" if sums.outside else ""
+        check = Check.fact(series, "shocks: within the law's ends", "all steps", fault, "no shock lies beyond them")
+        check.kind = "law"
+        yield check
 
 
 def _by_step(series: str, sums: ShockSums) -> Iterator[Check]:
@@ -148,11 +153,12 @@ def _by_step(series: str, sums: ShockSums) -> Iterator[Check]:
     level = total / np.sqrt(count)
     upper, lower = chi_square_logs(square - total**2 / count, count - 1)
     spread = np.where(upper < lower, -ndtri(np.exp(np.maximum(upper, -700))), ndtri(np.exp(np.maximum(lower, -700))))
-    for what, kind, z in (("level", "level", level), ("spread", "spread", spread)):
-        yield Check.of(
-            series, f"shocks: {what} by step", "sum over steps", kind, judge.squares(float(z @ z), z.size, n)
-        )
-        yield Check.of(series, f"shocks: {what} by step", *_worst_step(sums, z, kind))
+    # The spread is seen against its mean over steps: one that is wrong at all steps alike is told by itself.
+    apart = float(spread @ spread) - float(spread.sum()) ** 2 / spread.size
+    for kind, z, q, dof in (("level", level, float(level @ level), 0), ("spread", spread, apart, 1)):
+        finding = judge.squares(q, z.size - dof, n)
+        yield Check.of(series, f"shocks: {kind} by step", "sum over steps", kind, finding)
+        yield Check.of(series, f"shocks: {kind} by step", *_worst_step(sums, z, kind))
     if sums.period and sums.width == 1 and sums.period < count.size:
         yield _season(series, sums, sums.period)
 
@@ -188,12 +194,13 @@ def chi_square_logs(q: NDArray, dof: NDArray) -> tuple[NDArray, NDArray]:
 
 
 def _between_paths(series: str, sums: ShockSums) -> Iterator[Check]:
-    number, level, spread = sums.paths
+    number, *squares = sums.paths[:3]
     if number >= 2:
-        finding = judge.squares(float(level), int(number), sums.n)
-        yield Check.of(series, "shocks: level by path", "sum over paths", "level", finding)
-        finding = judge.squares(float(spread), int(number), sums.n)
-        yield Check.of(series, "shocks: spread by path", "sum over paths", "spread", finding)
+        # Seen against the mean of all paths, so that a level or spread that is wrong everywhere is not told here too.
+        level, spread = squares - sums.paths[3:] ** 2 / number
+        for what, kind, q in (("level", "memory", level), ("spread", "clustering", spread)):
+            finding = judge.squares(float(q), int(number) - 1, sums.n)
+            yield Check.of(series, f"shocks: {what} by path", "sum over paths", kind, finding)
     pairs = sum((width - 1) * steps for width, steps in sums.rows.items())
     if pairs:
         finding = _lag_finding(sums.rows, 1, pairs, sums.neighbours)

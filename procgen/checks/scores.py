@@ -16,6 +16,8 @@ BINS = 4096
 _ORDER = 8  # Legendre components; two of them are spent on level and spread
 _REACH, _CELLS = 16.0, 1 << 16
 _FINE = 1e-6  # the error of the table that is let stand
+_LIMIT = 8.3  # the size of a normal score that no shock of the stated law reaches (1e-16)
+_CLEAR, _DOUBT = 1e-3, 0.1  # beyond an end by more than this is no rounding error; more room than this is unclear
 _ROOM = 1e-7  # how far beyond the ends of a bounded law a shock may lie by rounding in double precision
 
 
@@ -56,14 +58,28 @@ class Scores:
             g[far] = self._exact(z[far])
         return g
 
-    def folded(self, z: NDArray) -> NDArray:
-        """Shocks that rounding carried over an end of the law, mirrored back.
+    @property
+    def bounded(self) -> bool:
+        """Whether the law ends somewhere, and rounding leaves no doubt of what lies beyond."""
+        return not self.gaussian and bool(np.isfinite(self._ends).any()) and self.room < _DOUBT
 
-        A score just beyond an end is boundless, though nothing but rounding put the shock there. A density that is
-        level up to the end, blurred by symmetric rounding, is restored by the mirror.
+    def outside(self, z: NDArray) -> int:
+        """How many of the shocks lie farther beyond the ends of the law than rounding can carry them."""
+        if not self.bounded:
+            return 0
+        low, high = self._ends
+        room = max(self.room, _CLEAR)
+        return int(np.count_nonzero((z < low - room) | (z > high + room)))
+
+    def folded(self, z: NDArray) -> NDArray:
+        """Shocks beyond an end of the law, mirrored back.
+
+        A score beyond an end is boundless. Where nothing but rounding put the shock there, the mirror restores a
+        density that is level up to the end; where the law is another one, `outside` has counted the shock, and the
+        mirror keeps a few of them from outweighing all the rest in every other test.
         """
         low, high = self._ends
-        below, above = (z < low) & (z >= low - self.room), (z > high) & (z <= high + self.room)
+        below, above = z < low, z > high
         if not below.any() and not above.any():
             return z
         return np.where(below, 2 * low - z, np.where(above, 2 * high - z, z))
@@ -97,7 +113,7 @@ class Scores:
         g = np.empty(np.shape(z))
         g[below] = ndtri(np.maximum(self.distribution.cdf(z[below]), tiny))
         g[~below] = -ndtri(np.maximum(self.distribution.sf(z[~below]), tiny))
-        return g
+        return np.clip(g, -_LIMIT, _LIMIT)  # what cannot be must not outweigh all the rest
 
     @cached_property
     def _median(self) -> float:

@@ -74,8 +74,9 @@ class ShockSums:
     chains: Counter[int] = field(default_factory=Counter)  # length of a path's run of shocks -> paths
     rows: Counter[int] = field(default_factory=Counter)  # paths side by side in a tile -> steps
     neighbours: float = 0.0
-    paths: NDArray = field(default_factory=lambda: np.zeros(3))  # number, sum of level², sum of spread²
+    paths: NDArray = field(default_factory=lambda: np.zeros(5))  # number, sums of level², spread², level, spread
     unusable: int = 0
+    outside: int = 0  # shocks where the law has none
 
     def __post_init__(self) -> None:
         self.width = -(-self.steps // PROFILE)
@@ -108,6 +109,7 @@ class ShockSums:
         if z.size == 0:
             return z
         z = np.ascontiguousarray(z)
+        self.outside += self.scores.outside(z)
         g = self.scores.normal_scores(z)
         u = ndtr(g)
         self.n += z.size
@@ -152,14 +154,16 @@ class ShockSums:
         usable = np.isfinite(lane.total)
         count = int(np.count_nonzero(usable))
         self.chains[n] += count
+        level = lane.total[usable] / np.sqrt(n)
         spread = ndtri(np.clip(chdtr(n, lane.square[usable]), 1e-300, 1 - 1e-16))
-        self.paths += count, float(np.sum(lane.total[usable] ** 2)) / n, float(np.sum(spread**2))
+        self.paths += count, float(level @ level), float(spread @ spread), float(level.sum()), float(spread.sum())
 
     def merge(self, other: ShockSums) -> None:
         """Add the sums of other paths."""
         self.n += other.n
         self.neighbours += other.neighbours
         self.unusable += other.unusable
+        self.outside += other.outside
         self.chains.update(other.chains)
         self.rows.update(other.rows)
         for name in ("sums", "counts", "paths", "profile", "memory", "cluster", "asymmetry"):

@@ -74,6 +74,8 @@ def _says(top: Check) -> str:
 
 def _seen(top: Check) -> str:
     """What was seen, in numbers."""
+    if top.log_p is None and top.kind == "law":
+        return top.note
     if top.what in _WHOLE and not top.probe.startswith("worst"):
         return _WHOLE[top.what].format(number(top.estimate, 4))
     if top.probe.startswith("worst"):

@@ -130,6 +130,7 @@ def test_scores_of_a_bounded_law_are_exact_up_to_its_ends():
     got = Scores(LAWS_BY_NAME["uniform"]()).normal_scores(z)
     assert got == pytest.approx(norm.ppf(uniform.cdf(z, -root, 2 * root)), abs=2e-6)
     scores = Scores(LAWS_BY_NAME["uniform"]())
-    beyond = scores.normal_scores(np.array([root + 1e-9, root + 1e-3]))
-    assert 4 < beyond[0] < 8  # rounding put it there
-    assert beyond[1] > 30  # nothing of this law did
+    beyond = np.array([root + 1e-9, root + 2e-3, root - 2e-3])
+    assert 4 < scores.normal_scores(beyond)[0] < 8
+    assert scores.normal_scores(beyond)[1] == pytest.approx(scores.normal_scores(beyond)[2])  # mirrored
+    assert scores.outside(beyond) == 1  # rounding put the first there, nothing of this law the second
