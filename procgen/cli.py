@@ -51,6 +51,25 @@ def steps_of(text: str) -> tuple[int, ...]:
     return tuple(int(part) for part in parts)
 
 
+def numbers_of(text: str) -> tuple[float, ...]:
+    """Frequencies from `0,0.1,0.5`."""
+    try:
+        numbers = tuple(float(part) for part in text.split(","))
+    except ValueError:
+        numbers = ()
+    if not numbers or not all(0.0 <= f <= 0.5 for f in numbers):
+        raise typer.BadParameter(f"expected frequencies in cycles a step, from 0 to 0.5, such as 0,0.1, got {text!r}")
+    return numbers
+
+
+def horizons_of(text: str) -> tuple[int, ...]:
+    """Steps ahead from `1,10,100`."""
+    steps = steps_of(text)
+    if min(steps) < 1:
+        raise typer.BadParameter(f"expected steps ahead from 1 on, such as 1,10,100, got {text!r}")
+    return steps
+
+
 def column_of(text: str) -> tuple[str, str]:
     """Series and column from `load_kw=load`."""
     series, given, column = text.partition("=")
@@ -208,13 +227,21 @@ def theory(
     lags: Annotated[
         int, typer.Option(metavar="N", help="Largest lag of the autocovariances.", min=0, max=100_000)
     ] = 40,
+    frequencies: Annotated[
+        tuple | None,
+        typer.Option(parser=numbers_of, metavar="0,0.1", help="Frequencies, in cycles a step, of spectral densities."),
+    ] = None,
+    horizon: Annotated[
+        tuple | None,
+        typer.Option(parser=horizons_of, metavar="1,10,100", help="Steps ahead for the variances of forecast errors."),
+    ] = None,
 ) -> None:
-    """Print what SPEC implies: equations, stationarity, means, variances, autocovariances."""
+    """Print what SPEC implies: equations, stationarity, moments, memory, and how far it can be forecast."""
     import procgen as pg
     from procgen.report.theory import theory_json, theory_text
 
     loaded = pg.load(spec)
-    printed((theory_json if json else theory_text)(loaded, pg.theory(loaded), at, lags))
+    printed((theory_json if json else theory_text)(loaded, pg.theory(loaded), at, lags, frequencies, horizon))
 
 
 @app.command(

@@ -51,9 +51,11 @@ def run(app: typer.Typer) -> NoReturn:
 
 def printed(text: str) -> None:
     """Write text to standard output, whatever letters the terminal can show."""
+    from procgen.report.letters import encoded
+
     stream = sys.stdout
     encoding = getattr(stream, "encoding", None) or "utf-8"
-    stream.write(text.encode(encoding, "replace").decode(encoding))
+    stream.write(encoded(text, encoding).decode(encoding))
     if not text.endswith("\n"):
         stream.write("\n")
 

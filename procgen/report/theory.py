@@ -17,6 +17,7 @@ from procgen.theory.series import FREQUENCIES, HORIZONS
 
 WIDTH = 100
 DUST = 1e-13  # of the variance
+NOTHING = 1e-9  # a partial autocorrelation that is shown as 0
 WIDEST = 90  # lags in a correlogram
 WANTED = ("mean", "variance", "autocovariance")  # reasons of others are told for stationary series only
 
@@ -82,7 +83,7 @@ def _series(theory: SeriesTheory, facts: dict[str, Any], unit: str | None, lags:
     lines += _table("step", facts["steps"], [("mean", facts["mean"]), ("variance", facts["variance"])])
     lines += _memory(theory, facts)
     lines += _spectrum(facts["spectral_density"])
-    if _remembers(facts):
+    if not theory.stationarity.covariance_stationary or _remembers(facts):
         lines += _ahead(facts["forecast_variance"])
         lines += _averaged(theory, facts) + _correlogram(theory, lags)
     lines += _law(facts)
@@ -96,13 +97,13 @@ def _memory(theory: SeriesTheory, facts: dict[str, Any]) -> list[str]:
     """Autocovariances from step 0, or from the middle of the steps shown where they change with the step."""
     steps, lags = facts["steps"], facts["autocovariance"]["lags"]
     start = 0 if theory.stationarity.covariance_stationary else steps[len(steps) // 2]
-    found = [("autocovariance", theory.autocovariance(lags, start))]
+    found: list[tuple] = [("autocovariance", theory.autocovariance(lags, start))]
     found += [("autocorrelation", theory.autocorrelation(lags, start))]
     if start == 0 and _remembers(facts):
-        found += [("partial", theory.partial_autocorrelation(lags))]
+        found += [("partial", theory.partial_autocorrelation(lags), NOTHING)]
     if start == 0 and not facts["gaussian"]:
         found += [("of squares", theory.autocorrelation_of_squares(lags))]
-    rows = [(name, None if v is None else _without_dust(v)) for name, v in found]
+    rows = [(name, None if v is None else _without_dust(v, *size)) for name, v, *size in found]
     return _table("lag" if start == 0 else f"lag, from step {start}", lags, rows)
 
 
@@ -144,7 +145,7 @@ def _worth(facts: dict[str, Any]) -> list[str]:
         if whole > DUST * variance:
             share = variance / whole
             worth = f"n/{number(float(f'{1 / share:.3g}'))}" if share < 1 else f"{number(float(f'{share:.3g}'))} n"
-            said[-1] += f": a mean of n steps tells as much as {worth} independent values"
+            said[-1] += f": a mean of n steps is worth {worth} independent values"
     return ["; ".join(said)] if said else []
 
 
@@ -167,10 +168,10 @@ def _law(facts: dict[str, Any]) -> list[str]:
     return _wrapped(["; ".join(lines)]) if lines else []
 
 
-def _without_dust(values: np.ndarray) -> list[float]:
+def _without_dust(values: np.ndarray, least: float = DUST) -> list[float]:
     """Numbers with what is left of cancelled digits shown as 0."""
     size = np.abs(values).max(initial=0.0)
-    return np.where(np.abs(values) < DUST * size, 0.0, values).tolist()
+    return np.where(np.abs(values) < least * size, 0.0, values).tolist()
 
 
 def _unknown(facts: dict[str, Any]) -> list[str]:
@@ -189,13 +190,13 @@ def _said_below(reason: str, facts: dict[str, Any]) -> bool:
     return begins in ("mean", "moments") and why in (missing.get(what) for what in WANTED)
 
 
-def _table(head: str, columns: Sequence[int], rows: Sequence[tuple[str, list | None]]) -> list[str]:
+def _table(head: str, columns: Sequence[float], rows: Sequence[tuple[str, list | None]]) -> list[str]:
     """Rows of numbers under their steps or lags; what is unknown altogether is left out."""
     known = [(name, [number(v) for v in values]) for name, values in rows if values is not None]
-    if not known:
+    if not known or not columns:
         return []
     wide = max(len(head), *(len(name) for name, _ in known)) + 2
-    cells = [[str(c), *(values[i] for _, values in known)] for i, c in enumerate(columns)]
+    cells = [[f"{c:.10g}", *(values[i] for _, values in known)] for i, c in enumerate(columns)]
     sizes = [max(map(len, column)) + 2 for column in cells]
     names = [head, *(name for name, _ in known)]
     return [

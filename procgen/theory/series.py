@@ -113,13 +113,14 @@ class SeriesTheory:
         """Correlation of (x - E x)^2 at from_step + lag with the same at from_step, at lags >= 0."""
 
         def correlation() -> np.ndarray:
-            x, later = self.expression, _steps(lags) + from_step
-            first = np.full(later.shape, from_step)
-            same = first if self.stationarity.covariance_stationary else later
-            spread = fourth.autocovariance_of_squares(x, first, first) * fourth.autocovariance_of_squares(x, same, same)
-            if np.any(spread <= 0.0):
+            x, later = self.expression, np.append(_steps(lags).ravel() + from_step, from_step)
+            covariances = fourth.autocovariance_of_squares(x, later, np.full(later.shape, from_step))
+            here = there = covariances[-1]
+            if not self.stationarity.covariance_stationary:
+                there = fourth.autocovariance_of_squares(x, later, later)[:-1]
+            if np.any(here * there <= 0.0):
                 raise Unknown("the variance of the squares is 0 at a step that is asked for")
-            return fourth.autocovariance_of_squares(x, later, first) / np.sqrt(spread)
+            return (covariances[:-1] / np.sqrt(here * there)).reshape(np.shape(lags))
 
         return self._try("autocorrelation_of_squares", correlation)
 

@@ -47,7 +47,19 @@ def is_filtered(x: Expression) -> bool:
 
 
 def remembered(x: Expression) -> np.ndarray:
-    """Autocovariances from lag 0 on, up to where they have died out."""
+    """Autocovariances from lag 0 on, up to where they have died out; kept, since many questions end in them."""
+    kept = vars(x)
+    if "remembered" not in kept:
+        try:
+            kept["remembered"] = _added_up(x)
+        except Unknown as unknown:
+            kept["remembered"] = unknown
+    if isinstance(kept["remembered"], Unknown):
+        raise kept["remembered"]
+    return kept["remembered"]
+
+
+def _added_up(x: Expression) -> np.ndarray:
     count = max(FEWEST, 4 * _reach(x))
     while count <= longest(x):
         lags = np.arange(count)
