@@ -99,6 +99,7 @@ class Table:
     def __init__(self, frame: pd.DataFrame, names: Names, spec: Any, where: str):
         self.spec, self.where = spec, where
         self.columns = {name: name for name in spec.series}
+        self.same_draws = False
         self.faults: list[Check] = []
         if not len(frame):
             raise TableError(f"{where} has no rows")

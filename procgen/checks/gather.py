@@ -179,7 +179,7 @@ class Gather:
     def _recover(self, lane: Lane, name: str, x: NDArray) -> NDArray:
         route = self.routes[name]
         if name not in lane.shocks:
-            lane.carriers[name] = route.start(lane.paths)
+            lane.carriers[name] = route.start(lane.first_path, lane.paths)
             lane.shocks[name] = ShockLane.start(lane.paths)
             if route.grain and route.kalman is None and name not in self.noise:
                 self.noise[name] = _rounding_noise(route, x[:, : min(64, lane.paths)], lane.first_path)
@@ -190,7 +190,8 @@ class Gather:
     def _predict(self, lane: Lane, name: str, x: NDArray) -> None:
         route = self.routes[name]
         if name not in lane.errors:
-            lane.carriers[name], lane.errors[name] = route.start(lane.paths), ErrorLane.start(lane.paths)
+            lane.carriers[name] = route.start(lane.first_path, lane.paths)
+            lane.errors[name] = ErrorLane.start(lane.paths)
         z, lane.carriers[name] = route.tile(x, lane.carriers[name], lane.first_path, lane.step)
         self.errors[name].absorb(z, lane.errors[name])
 
@@ -288,7 +289,7 @@ def _cross_products(plan: Plan, rows: NDArray) -> NDArray:
 
 def _rounding_noise(route: Route, x: NDArray, first_path: int) -> float:
     """Variance that rounding adds to a recovered shock: what a shift within the cells does to it, squared."""
-    plain, moved = route.start(x.shape[1]), route.start(x.shape[1])
+    plain, moved = (route.start(first_path, x.shape[1]) for _ in range(2))
     shift = route.grain * dither_of(first_path, x)
     with np.errstate(all="ignore"):
         a, b = plain.tile(x), moved.tile(x + shift)

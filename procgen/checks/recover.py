@@ -54,13 +54,13 @@ class Route:
     stopped: str = ""  # why a tile could not be undone
     _means: OrderedDict[tuple[int, int], NDArray] = field(default_factory=OrderedDict, repr=False)
 
-    def start(self, paths: int) -> Any:
-        """A carrier for `paths` paths, before step 0."""
+    def start(self, first_path: int, paths: int) -> Any:
+        """A carrier for `paths` paths from `first_path` on, before step 0."""
         if self.kalman is not None:
             return self.kalman.start(paths)
-        from procgen.terms.recover import recovery
+        from procgen.checks.undo import undone
 
-        return recovery(self.graph, self.series, paths)
+        return undone(self.graph, self.series, self.theory, first_path, paths)
 
     def tile(self, x: NDArray, carrier: Any, first_path: int, first_step: int) -> tuple[NDArray, Any]:
         """Standardised shocks (steps, paths) of the next tile of values, and the carrier after it."""
@@ -83,9 +83,9 @@ class Route:
 
     def needed(self, most: int) -> int | None:
         """Steps until the first shock comes out of values that the spec itself draws; None beyond `most`."""
-        from procgen.terms.run import Run
+        from procgen.terms.by_path import run as run_of
 
-        run, carrier, step = Run(self.graph, 0, 1), self.start(1), 0
+        run, carrier, step = run_of(self.graph, 0, 1), self.start(0, 1), 0
         while step < most and carrier is not None:
             z, carrier = self.tile(run.tile(256)[self.series], carrier, 0, step)
             known = np.isfinite(z[:, 0])
@@ -115,10 +115,16 @@ def dither(first_path: int, paths: int, first_step: int, steps: int) -> NDArray:
     return (x >> np.uint64(11)).astype(float) * 2.0**-53 - (0.5 - 2.0**-54)
 
 
-def route(name: str, theory: Any, graph: Any, grain: float) -> Route | Cannot:
-    """The best way to the shocks of a series, or why there is none."""
+def route(name: str, theory: Any, graph: Any, grain: float, same_draws: bool = True) -> Route | Cannot:
+    """The best way to the shocks of a series, or why there is none.
+
+    `same_draws`: whether path p of the data has the drawn parameters of path p of the spec.
+    """
     from procgen.terms.base import Unknown
     from procgen.terms.recover import recovery
+
+    if not same_draws and getattr(theory, "mixture", None) is not None:
+        return Cannot("the parameters of its paths are drawn, and not known of data that this spec has not drawn")
 
     system = theory.system() if theory.gaussian else None
     size = len(system.initial) if system is not None and system.noise_path is None else LARGEST_STATE + 1

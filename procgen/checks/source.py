@@ -21,6 +21,7 @@ class Origin(Protocol):
     rows: int
     faults: list[Check]
     columns: dict[str, str]  # series of `spec` -> the name that the reader knows
+    same_draws: bool  # whether drawn parameters of a path are those that `spec` draws for it
 
     def blocks(self) -> Iterator[tuple[int, int, Mapping[str, np.ndarray]]]: ...
     def checks(self) -> list[Check]: ...
@@ -74,6 +75,7 @@ class EnsembleOrigin:
     def __init__(self, ensemble: Any, spec: Any = None):
         self.ensemble = ensemble
         self.spec = ensemble.spec if spec is None else spec
+        self.same_draws = same_draws(ensemble.spec, self.spec)
         self.steps, self.rows = ensemble.whole.steps, ensemble.whole.rows
         self.faults: list[Check] = []
         missing = [name for name in self.spec.series if name not in ensemble.names]
@@ -199,3 +201,13 @@ def with_revealed(spec: Any, revealed: list[str]) -> tuple[Any, dict[str, str]]:
         except SpecError:  # revealed under a name that no `use:` can take, such as the `use` itself
             del raw["series"][name]
     return spec, columns
+
+
+def same_draws(first: Any, second: Any) -> bool:
+    """Whether two specs draw the same parameters for a path."""
+    from procgen.terms.varied import Varied
+
+    if first is second:
+        return True
+    a, b = ({(p.name, p.varying, p.stream) for p in Varied(spec).parameters.values()} for spec in (first, second))
+    return b <= a

@@ -56,7 +56,7 @@ def validate(
     if not 0 < false_alarm < 1:
         raise ValueError(f"expected a false-alarm probability between 0 and 1, got {false_alarm}")
     origin = source.origin(data, spec, columns)
-    gather = gathered(plan_of(origin.spec, origin.steps), origin.blocks(), progress, origin.rows)
+    gather = gathered(plan_of(origin.spec, origin.steps, origin.same_draws), origin.blocks(), progress, origin.rows)
     rows = [*origin.checks(), *origin.faults, *judged(gather)]
     absent = getattr(origin, "absent", 0)
     if absent:  # rows that are missing are named once, not again as values that are not finite
@@ -83,8 +83,8 @@ def gathered(plan: Plan, blocks: Blocks, progress: Tick | None = None, rows: int
     return gather
 
 
-def plan_of(spec: Any, steps: int | None = None) -> Plan:
-    """Everything that the pass over the data must know, from the spec's theory."""
+def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Plan:
+    """Everything that the pass over the data must know, from the spec's theory; `same_draws` as for `route`."""
     from procgen.terms.graph import build
     from procgen.theory import theory
 
@@ -95,10 +95,10 @@ def plan_of(spec: Any, steps: int | None = None) -> Plan:
     for name, declared in spec.series.items():
         grain = grain_of(declared, th[name], steps)
         plan = plan_series(name, th[name], steps, grain, _periods(graph, name))
-        way = route(name, th[name], graph, grain)
+        way = route(name, th[name], graph, grain, same_draws)
         series.append(plan)
         routes[name] = way
-        random = bool(th[name].expression.sources)
+        random = th[name].random
         precision.append(Precision(name, declared.type, declared.decimals, random, th[name].discrete))
     ways = [way for way in routes.values() if isinstance(way, Route) and way.scores is not None]
     pairs = {(a.series, b.series): expected(a, b, th.axis.space) for a, b in list(combinations(ways, 2))[:PAIR_LIMIT]}

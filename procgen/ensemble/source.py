@@ -55,9 +55,9 @@ class SpecSource:
         self.depth = self.graph.depth
 
     def run(self, first_path: int, paths: int) -> Run:
-        from procgen.terms.run import Run as SpecRun
+        from procgen.terms.by_path import run
 
-        return SpecRun(self.graph, first_path, paths, reveal=self.reveal)
+        return run(self.graph, first_path, paths, self.reveal)
 
 
 def read_spec(raw: Mapping[str, Any]) -> Any:

@@ -145,7 +145,7 @@ class LawOf(Domain):
         law = reader.laws.get(name)
         if law is None:
             return reader.expected(tree, one_of(sorted(reader.laws)), did_you_mean(name, reader.laws))
-        values = self._parameters(law, inner, tree, reader)
+        values = self._parameters(law, inner, tree, reader.closed())
         if values is INVALID:
             return INVALID
         try:

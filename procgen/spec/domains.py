@@ -20,6 +20,7 @@ if TYPE_CHECKING:
 
 
 Schema = dict[str, Any]  # a part of a JSON Schema (2020-12)
+FORMS = ("draw", "from_table", "parameter", "column")  # the mappings that stand in place of a number
 
 
 class _Sentinel:
@@ -51,6 +52,8 @@ class Reading(Protocol):
     def expected(self, tree: Tree, what: str, hint: str = "") -> Any: ...
     def about(self, parameter: Parameter | None) -> Reading: ...
     def body(self, tree: Tree) -> tuple[Entry, ...]: ...
+    def varying(self, tree: Tree, domain: Real) -> Any: ...
+    def closed(self) -> Reading: ...
 
 
 class Domain:
@@ -89,6 +92,8 @@ class Real(Domain):
 
     def read(self, tree: Tree, reader: Reading) -> Any:
         value = tree.value
+        if varies(tree):
+            return reader.varying(tree, self)
         if isinstance(value, bool) or not isinstance(value, (int, float)):
             return reader.expected(tree, self.describe(), unquote(value))
         try:
@@ -106,7 +111,8 @@ class Real(Domain):
             "minimum": self.at_least,
             "maximum": self.at_most,
         }
-        return {"type": "number"} | {word: limit for word, limit in limits.items() if limit is not None}
+        number = {"type": "number"} | {word: limit for word, limit in limits.items() if limit is not None}
+        return {"anyOf": [number, {"$ref": "#/$defs/varying"}]}
 
     def holds(self, number: float) -> bool:
         """Return whether a finite number lies within the bounds."""
@@ -164,7 +170,7 @@ class Reals(Domain):
         return f"a list{count}, each {each}" if count else f"{each}, or a list of such numbers"
 
     def read(self, tree: Tree, reader: Reading) -> Any:
-        if tree.is_map:
+        if tree.is_map and not varies(tree):
             return reader.expected(tree, self.describe())
         trees = tree.value if tree.is_list else (tree,)
         values = tuple([self.each.read(t, reader) for t in trees])
@@ -279,3 +285,8 @@ def _on_grid(tree: Tree, reader: Reading, method: str) -> Any:
     except ValueError as error:
         reader.fault(tree, str(error))
         return INVALID
+
+
+def varies(tree: Tree) -> bool:
+    """Return whether a mapping stands in place of a number that varies."""
+    return tree.is_map and any(form in tree.value for form in FORMS)

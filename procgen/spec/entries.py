@@ -6,9 +6,10 @@ from collections.abc import Iterator, Mapping, Sequence
 from typing import Any, Protocol
 
 from procgen.spec.declare import INVALID, Body, Parameter, Real, read_each
-from procgen.spec.domains import Reading
+from procgen.spec.domains import Reading, varies
 from procgen.spec.model import Entry, Frozen
 from procgen.spec.tree import NAME, Tree
+from procgen.spec.varying import joint_issues, labelled
 from procgen.spec.words import did_you_mean, unknown_key
 
 ENTRY_KEYS = ("as", "times")
@@ -29,6 +30,7 @@ class KindDeclaration(Protocol):
     outputs: tuple[str, ...]
 
     def check(self, values: Mapping[str, Any]) -> Any: ...
+    def outputs_of(self, values: Mapping[str, Any]) -> tuple[str, ...]: ...
 
 
 def read_body(tree: Tree, reader: Reading) -> tuple[Entry, ...]:
@@ -112,6 +114,7 @@ class _Terms:
             self._one_spread(inner, spread)
         if "shock" in given:
             values |= {name: None for name in REPLACED if name in values}
+        values = labelled(values, self.label)
         if len(self.reader.faults) == before and INVALID not in values.values():
             self._check(values, inner, "shock" in given)
         places |= {name: value.place for name, value in given.items()}
@@ -119,7 +122,7 @@ class _Terms:
         return Entry(
             self.kind.kind,
             self.label,
-            times,
+            labelled({"times": times}, self.label)["times"],
             Frozen(values),
             Frozen(bodies),
             shock,
@@ -145,7 +148,7 @@ class _Terms:
             entry = tree.is_map and "of" not in tree.value and any(k in self.reader.catalogue for k in tree.value)
             short = "of" if entry or not tree.is_map else None
         else:
-            rate = tree.is_map and set(tree.value) == {"value", "per"}
+            rate = tree.is_map and (set(tree.value) == {"value", "per"} or varies(tree))
             short = None if tree.is_map and not rate else self.kind.short
         if short is None:
             return tree
@@ -178,7 +181,7 @@ class _Terms:
 
     def _check(self, values: Mapping[str, Any], inner: Tree, shocked: bool) -> None:
         """Report what the kind says of its parameters together."""
-        for name, message in self.kind.check({**values, "shocked": shocked}):
+        for name, message in joint_issues(self.kind.check, {**values, "shocked": shocked}):
             self.reader.fault(inner.value.get(name, inner), message)
 
 

@@ -142,6 +142,7 @@ class Spec:
     correlation: Correlation
     raw: dict[str, Any] = field(compare=False)
     file: str | None = field(compare=False)
+    parameters: Mapping[str, Any] = field(default_factory=Frozen)  # declared draws by name (`spec.varying`)
 
     def changed(self, paths: int | None = None, steps: int | None = None, seed: int | None = None) -> Spec:
         """Return this spec with another number of paths or steps, or another seed; SpecError when out of range."""

@@ -10,10 +10,11 @@ from typing import Any
 
 from procgen.spec.calendar import Grid
 from procgen.spec.correlated import read_correlation
-from procgen.spec.declare import INVALID, Body, Choice, Parameter, Text, Whole, read_each
+from procgen.spec.declare import INVALID, Body, Choice, Parameter, Real, Text, Whole, read_each
 from procgen.spec.entries import SERIES_KEYS, read_body, read_name
 from procgen.spec.links import Links
 from procgen.spec.model import Correlation, Entry, Fault, Frozen, Place, Series, Shared, Spec, SpecError
+from procgen.spec.parameters import Known, read_section, read_varying
 from procgen.spec.timegrid import MOST, read_time
 from procgen.spec.tree import TooMuch, Tree, from_data
 from procgen.spec.yaml12 import MAX_BYTES, from_text
@@ -28,7 +29,7 @@ HEAD = (
     Parameter("seed", "", Whole(at_least=0, at_most=2**128 - 1), "the number all draws follow from"),
     Parameter("paths", "P", Whole(at_least=1, at_most=MOST), "number of paths"),
 )
-SECTIONS = ("time", "reuse", "shared", "series", "correlation")
+SECTIONS = ("time", "reuse", "parameters", "shared", "series", "groups", "correlation")
 SERIES = (
     Parameter("of", "", Body(), "the terms of the series"),
     Parameter("unit", "", Text(), "unit of the values, kept in the metadata of the column", default=None),
@@ -48,6 +49,7 @@ class Reader:
         self.faults: list[Fault] = []
         self.grid: Grid | None = None
         self.subject: Parameter | None = None
+        self.known: Known | None = None  # what may stand in place of numbers; None where nothing can vary
 
     def fault(self, tree: Tree, message: str) -> None:
         """Report what is wrong at a tree; the same fault of an anchored text once."""
@@ -68,6 +70,20 @@ class Reader:
         """Return a reader that shares everything and speaks of `parameter`."""
         other = copy.copy(self)
         other.subject = parameter
+        return other
+
+    def varying(self, tree: Tree, domain: Real) -> Any:
+        """Return what stands at a tree in place of a number, or INVALID after reporting."""
+        return read_varying(tree, domain, self, self.known)
+
+    def closed(self) -> Reader:
+        """Return a reader of numbers that cannot vary."""
+        return self.open(None)
+
+    def open(self, known: Known | None) -> Reader:
+        """Return a reader of numbers that can be what is known by name."""
+        other = copy.copy(self)
+        other.known = known
         return other
 
     def body(self, tree: Tree) -> tuple[Entry, ...]:
@@ -136,8 +152,10 @@ def _spec(tree: Tree, reader: Reader, file: str | None) -> Spec | None:
         return None
     head = read_each(tree, HEAD, reader, also=SECTIONS)
     reader.grid = _grid(tree, reader)
-    shared = {name: _shared(name, t, reader) for name, t in _named(tree, "shared", reader).items()}
-    series = {name: _series(name, t, reader) for name, t in _named(tree, "series", reader).items()}
+    parameters = read_section(tree.value["parameters"], reader) if "parameters" in tree.value else {}
+    terms = reader.open(Known(parameters))
+    shared = {name: _shared(name, t, terms) for name, t in _named(tree, "shared", reader).items()}
+    series = {name: _series(name, t, terms) for name, t in _named(tree, "series", reader).items()}
     if not series:
         _need(tree, "series", "a mapping of names to bodies, as in {load: [{white_noise: {sd: 1}}]}", reader)
     _unique(tree, shared, series, reader)
@@ -159,6 +177,7 @@ def _spec(tree: Tree, reader: Reader, file: str | None) -> Spec | None:
         correlation,
         raw=tree.plain(),
         file=file,
+        parameters=Frozen(parameters),
     )
 
 

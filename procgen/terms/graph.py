@@ -21,6 +21,7 @@ from procgen.terms.base import Array, Node, Term
 from procgen.terms.combine import Hidden, Scaled, Sum
 from procgen.terms.noise import WhiteNoise
 from procgen.terms.start import JointStart
+from procgen.terms.varied import Varied
 
 
 @dataclass(eq=False)
@@ -53,6 +54,7 @@ class Graph:
 
     def __init__(self, spec: Spec):
         self.spec = spec
+        self.varied: Varied | None = None  # set by `build`
         self.sources: list[Source] = []
         self.groups: list[Group] = []
         self.filters: dict[int, Node] = {}
@@ -303,8 +305,11 @@ class Graph:
 
 
 def build(spec: Spec) -> Graph:
-    """The graph of a checked spec."""
-    return Graph(spec)
+    """The graph of a checked spec; where parameters vary by path, with their medians, and `varied` has them all."""
+    varied = Varied(spec)
+    graph = Graph(varied.typical if varied.parameters else varied.spec)
+    graph.varied = varied
+    return graph
 
 
 NORMAL = Normal()

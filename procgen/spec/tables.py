@@ -1,0 +1,156 @@
+"""Tables beside a spec: values by path or by series, from a CSV or Parquet file.
+
+What a file says is put into the spec in its place, so that a spec once read needs no file any more, and its digest
+is one of the values: `from_table: {file: stores.csv, key: series}` becomes `from_table: {key: series, values: {…}}`.
+"""
+
+from __future__ import annotations
+
+import csv
+import math
+from collections.abc import Sequence
+from pathlib import Path
+from typing import Any
+
+from procgen.spec.declare import INVALID, Choice, Domain, Parameter, Reals, Schema, Text, read_each
+from procgen.spec.domains import Reading
+from procgen.spec.draws import TableDraw
+from procgen.spec.model import Frozen
+from procgen.spec.named import Named
+from procgen.spec.tree import Tree
+from procgen.spec.words import did_you_mean, one_of
+
+TABLE = "from_table"
+MOST_VALUES = 50_000  # they become a part of the spec
+Columns = dict[str, list[Any]]
+
+
+class Values(Domain):
+    """A list of numbers, one a path, or a mapping of names of series to numbers."""
+
+    def describe(self) -> str:
+        return "a list of numbers, one a path, or a mapping of names of series to numbers"
+
+    def read(self, tree: Tree, reader: Reading) -> Any:
+        return Named(Reals().each).read(tree, reader) if tree.is_map else Reals().read(tree, reader)
+
+    def schema(self) -> Schema:
+        return {"type": ["array", "object"]}
+
+
+LOOKUP = (
+    Parameter("file", "", Text(), "a CSV or Parquet file, beside the spec", default=None),
+    Parameter("key", "", Choice("path", "series"), "whose values these are; in a file, also the column that says so"),
+    Parameter("column", "", Text(), "column of the values; the name of the parameter when absent", default=None),
+    Parameter("values", "", Values(), "the values themselves, instead of a file", default=None),
+)
+
+
+def read_lookup(tree: Tree, column: str, reader: Reading) -> Any:
+    """Return the TableDraw written at `from_table` of a mapping, or INVALID after reporting why there is none."""
+    if set(tree.value) != {TABLE}:
+        return reader.expected(tree, f"the key {TABLE} alone")
+    inner = tree.value[TABLE]
+    before = len(reader.faults)
+    values = read_each(inner, LOOKUP, reader)
+    if len(reader.faults) > before or INVALID in values.values():
+        return INVALID
+    if (values["file"] is None) == (values["values"] is None):
+        return reader.expected(inner, "a file or values, one of them")
+    if values["values"] is None:
+        tree.value[TABLE] = inner = _inlined(inner, values, column, reader)
+        return INVALID if inner is INVALID else read_lookup(tree, column, reader)
+    given = values["values"]
+    if isinstance(given, tuple) != (values["key"] == "path"):
+        kind = "a list of numbers" if values["key"] == "path" else "a mapping of names to numbers"
+        return reader.expected(inner.value["values"], f"{kind}, for key: {values['key']}")
+    return TableDraw(given)
+
+
+def _inlined(tree: Tree, values: dict[str, Any], column: str, reader: Reading) -> Any:
+    """Return the tree of a table with its values in the place of the file."""
+    key, name = values["key"], values["column"] or column
+    table = read_file(tree.value["file"], reader)
+    if table is INVALID or not _has(table, (key, name), tree, reader):
+        return INVALID
+    place = tree.value["file"].place
+    numbers = [Tree(value, place) for value in table[name]]
+    if key == "series":
+        names = [str(value) for value in table[key]]
+        if len(set(names)) < len(names):
+            reader.fault(tree.value["file"], f"the series {_twice(names)} stands in two rows; keep one")
+            return INVALID
+        inner = Tree(dict(zip(names, numbers, strict=True)), place)
+    else:
+        if sorted(table[key]) != list(range(len(numbers))):
+            last = len(numbers) - 1
+            reader.fault(tree.value["file"], f"expected the paths 0 to {last} in column path, each once, in any order")
+            return INVALID
+        order = sorted(range(len(numbers)), key=lambda row: table[key][row])
+        inner = Tree(tuple([numbers[row] for row in order]), place)
+    return Tree({"key": tree.value["key"], "values": inner}, tree.place, tree.keys)
+
+
+def _twice(names: Sequence[str]) -> str:
+    return next(name for i, name in enumerate(names) if name in names[:i])
+
+
+def _has(table: Columns, names: Sequence[str], tree: Tree, reader: Reading) -> bool:
+    for name in names:
+        if name not in table:
+            message = f"the table has no column {name}; it has {one_of(table)}; {did_you_mean(name, table)}"
+            reader.fault(tree.value["file"], message.rstrip("; "))
+    return all(name in table for name in names)
+
+
+def read_file(tree: Tree, reader: Reading) -> Any:
+    """Return the columns of the file named at `tree`, by name, or INVALID after reporting why it cannot be read."""
+    path = Path(tree.value)
+    if tree.place.file and not path.is_absolute():
+        path = Path(tree.place.file).parent / path
+    try:
+        columns = _parquet(path) if path.suffix == ".parquet" else _csv(path)
+    except FileNotFoundError:
+        reader.fault(tree, f"there is no file {path}; a path is taken from the folder of the spec")
+        return INVALID
+    except (OSError, ValueError, csv.Error) as error:
+        reader.fault(tree, f"cannot read the table {path}: {str(error).splitlines()[0]}")
+        return INVALID
+    count = sum(len(values) for values in columns.values())
+    if count > MOST_VALUES:
+        reader.fault(tree, f"expected a table of at most {MOST_VALUES:,} values, got {count:,}; leave some out")
+        return INVALID
+    return columns
+
+
+def _csv(path: Path) -> Columns:
+    with open(path, encoding="utf-8-sig", newline="") as file:
+        rows = [row for row in csv.reader(file) if row]
+    if len(rows) < 2:
+        raise ValueError("expected a line of names, and lines of values under it")
+    short = next((i for i, row in enumerate(rows) if len(row) != len(rows[0])), None)
+    if short is not None:
+        raise ValueError(f"row {short + 1} has {len(rows[short])} cells, and there are {len(rows[0])} names")
+    return {name.strip(): [_cell(row[i].strip()) for row in rows[1:]] for i, name in enumerate(rows[0])}
+
+
+def _cell(text: str) -> Any:
+    """Return a cell as a whole number, a number, or the text that it is."""
+    for kind in (int, float):
+        try:
+            value = kind(text)
+        except ValueError:
+            continue
+        return value if math.isfinite(value) else text
+    return text
+
+
+def _parquet(path: Path) -> Columns:
+    import pyarrow.parquet as pq
+
+    if not path.exists():
+        raise FileNotFoundError(path)
+    return pq.read_table(path).to_pydict()
+
+
+__all__ = ["LOOKUP", "TABLE", "Frozen", "read_file", "read_lookup"]

@@ -1,0 +1,114 @@
+"""The law at one step of a series with drawn parameters: a weighted sum of the laws given them."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+HALVINGS = 200
+
+
+class MixedLaw:
+    """A finite mixture of laws, with the calls of a frozen SciPy distribution."""
+
+    def __init__(self, weights: Sequence[float], laws: Sequence[Any]):
+        self.weights, self.laws = tuple(weights), tuple(laws)
+
+    def _sum(self, what: str, x: Any) -> NDArray:
+        x = np.asarray(x, float)
+        total = np.zeros(x.shape)
+        for weight, law in zip(self.weights, self.laws, strict=True):
+            total = total + weight * getattr(law, what)(x)
+        return total
+
+    def pdf(self, x: Any) -> NDArray:
+        return self._sum("pdf", x)
+
+    def cdf(self, x: Any) -> NDArray:
+        return self._sum("cdf", x)
+
+    def sf(self, x: Any) -> NDArray:
+        return self._sum("sf", x)
+
+    def ppf(self, p: Any) -> NDArray:
+        """Quantiles, by halving between those of the parts."""
+        p = np.asarray(p, float)
+        low, high = self._ends(p)
+        for _ in range(HALVINGS):
+            middle = 0.5 * (low + high)
+            if np.all((middle == low) | (middle == high)):
+                break
+            upper = np.where(p < 0.5, self.cdf(middle) < p, self.sf(middle) > 1.0 - p)
+            low, high = np.where(upper, middle, low), np.where(upper, high, middle)
+        return 0.5 * (low + high)
+
+    def _ends(self, p: NDArray) -> tuple[NDArray, NDArray]:
+        parts = np.array([law.ppf(p) for law in self.laws])
+        return parts.min(axis=0), parts.max(axis=0)
+
+    def isf(self, p: Any) -> NDArray:
+        return self.ppf(1.0 - np.asarray(p, float))
+
+    def mean(self) -> float:
+        return float(sum(w * law.mean() for w, law in zip(self.weights, self.laws, strict=True)))
+
+    def var(self) -> float:
+        m = self.mean()
+        parts = zip(self.weights, self.laws, strict=True)
+        return float(sum(w * (law.var() + (law.mean() - m) ** 2) for w, law in parts))
+
+    def std(self) -> float:
+        return float(np.sqrt(self.var()))
+
+
+@dataclass(frozen=True)
+class Normal:
+    """A normal law, for its areas."""
+
+    mean: float
+    sd: float
+
+    def cdf(self, x: NDArray) -> NDArray:
+        from scipy.special import ndtr
+
+        return ndtr((x - self.mean) / self.sd)
+
+
+class MixedNormals(MixedLaw):
+    """The same of normal laws, all at once."""
+
+    def __init__(self, weights: Sequence[float], means: Sequence[float], sds: Sequence[float]):
+        super().__init__(weights, ())
+        self._w, self._m, self._s = (np.asarray(x, float) for x in (weights, means, sds))
+
+    def _z(self, x: Any) -> NDArray:
+        return (np.asarray(x, float)[..., None] - self._m) / self._s
+
+    def pdf(self, x: Any) -> NDArray:
+        return np.exp(-0.5 * self._z(x) ** 2) @ (self._w / (self._s * np.sqrt(2 * np.pi)))
+
+    def cdf(self, x: Any) -> NDArray:
+        from scipy.special import ndtr
+
+        return ndtr(self._z(x)) @ self._w
+
+    def sf(self, x: Any) -> NDArray:
+        from scipy.special import ndtr
+
+        return ndtr(-self._z(x)) @ self._w
+
+    def _ends(self, p: NDArray) -> tuple[NDArray, NDArray]:
+        from scipy.special import ndtri
+
+        parts = self._m + self._s * ndtri(p)[..., None]
+        return parts.min(axis=-1), parts.max(axis=-1)
+
+    def mean(self) -> float:
+        return float(self._w @ self._m)
+
+    def var(self) -> float:
+        return float(self._w @ (self._s**2 + (self._m - self.mean()) ** 2))
