@@ -51,7 +51,8 @@ class Links:
 
     def outputs(self, entry: Entry) -> list[str]:
         """Return the hidden outputs that go by an entry's label: its own, and those of its unnamed shock."""
-        found = [] if entry.kind not in self.reader.catalogue else list(self.reader.catalogue[entry.kind].outputs)
+        kind = self.reader.catalogue.get(entry.kind)
+        found = [] if kind is None else list(kind.outputs_of(entry.values))
         if entry.shock is not None and not named(entry.shock):
             found += self.outputs(entry.shock)
         return found
@@ -65,7 +66,7 @@ class Links:
         if entry.shock is not None:
             return not named(entry.shock) and self.draws(entry.shock)
         kind = self.reader.catalogue.get(entry.kind)
-        return kind is None or kind.noise or kind.takes_shock
+        return kind is None or kind.noise or kind.takes_shock or getattr(kind, "correlates", False)
 
     def check(self) -> None:
         """Report every `use` of a name that does not exist, and uses that go in a circle."""

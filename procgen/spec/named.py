@@ -5,7 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 from typing import Any
 
-from procgen.spec.declare import INVALID, Domain, Reading, Reals, Schema
+from procgen.spec.declare import INVALID, Domain, Reading, Reals, Schema, one_or_list
 from procgen.spec.entries import read_name
 from procgen.spec.model import Frozen
 from procgen.spec.tree import Tree
@@ -72,3 +72,23 @@ class Rows(Domain):
     def schema(self) -> Schema:
         row = {"type": "array", "items": self.each.each.schema(), "minItems": 1}
         return {"type": "array", "items": row, "minItems": 1}
+
+
+@dataclass(frozen=True)
+class Matrices(Domain):
+    """A list of matrices, one standing for a list of one; read as a tuple of tuples of rows."""
+
+    each: Rows
+
+    def describe(self) -> str:
+        return f"a matrix, {self.each.describe()}, or a list of matrices"
+
+    def read(self, tree: Tree, reader: Reading) -> Any:
+        if not tree.is_list or not all(t.is_list for t in tree.value):
+            return reader.expected(tree, self.describe())
+        several = all(row.is_list for t in tree.value for row in t.value)
+        matrices = tuple([self.each.read(t, reader) for t in (tree.value if several else (tree,))])
+        return INVALID if any(matrix is INVALID for matrix in matrices) else matrices
+
+    def schema(self) -> Schema:
+        return one_or_list(self.each.schema(), 0)

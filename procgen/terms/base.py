@@ -94,6 +94,7 @@ class Term:
     composition: ClassVar[bool] = False
     separate: ClassVar[bool] = False  # whether each entry of its body is an input of its own
     outputs: ClassVar[tuple[str, ...]] = ()
+    correlates: ClassVar[bool] = False  # whether its first draw may be named in `correlation`, as those of a noise may
     burns_in: ClassVar[bool] = False  # whether `begin` reads its inputs from the first row on, a few rows at a time
     portable: ClassVar[bool] = True
     why_not_portable: ClassVar[str] = ""
@@ -117,6 +118,11 @@ class Term:
     def check(cls, values: Mapping[str, Any]) -> Iterable[Issue]:
         """Faults that no single parameter shows, as (parameter, sentence)."""
         return ()
+
+    @classmethod
+    def outputs_of(cls, values: Mapping[str, Any]) -> tuple[str, ...]:
+        """The hidden outputs of a term with these values, where they are not the same for all of its kind."""
+        return cls.outputs
 
     def draws(self) -> tuple[Draw, ...]:
         """The primary streams that the term needs, in the order in which ``recurse`` receives them."""
@@ -152,6 +158,14 @@ class Term:
     def invert(self, values: Array, known: Sequence[Array | None], state: State | None, at: Array):
         """The one unknown input (None in `known`) from the values; NaN where the unknown past matters."""
         return Unknown(f"{self.kind} cannot be inverted")
+
+    def rank(self, values: Array, known: Sequence[Array | None], v: Array, state: State | None, at: Array):
+        """Uniforms of the values given what came before them, and the state after them; for checks.
+
+        P(X < x) + v·P(X = x) under the law of a value X given its past: independent and uniform for independent
+        uniforms v (Rosenblatt 1952; Brockwell 2007 for values with a chance of their own). NaN where it is not known.
+        """
+        return Unknown(f"the values of {self.kind} have no ranks given their past that are computed")
 
     def ahead(self, steps: Array, state: State, *inputs: Ahead) -> Ahead | Unknown:
         """Mean and variance at the coming `steps`, given the state just before the first of them."""

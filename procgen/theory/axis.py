@@ -8,7 +8,7 @@ from typing import Any
 
 import numpy as np
 
-from procgen.theory import known, markov
+from procgen.theory import known, markov, vector
 from procgen.theory.arma import PowerSeries, spectral_radius
 from procgen.theory.chains import States, Switching
 from procgen.theory.expression import Expression, opaque, product
@@ -113,6 +113,10 @@ class Axis(Volatile):
     def fractional_gaussian(self, noise: Expression, hurst: float, sd: float) -> Expression:
         """Increments of fractional Brownian motion with standard deviation `sd`, made from a white noise."""
         return self.process(StationaryGaussian(self.name, (noise,), GaussianNoise(hurst, sd * sd)))
+
+    def vector(self, noises: Sequence[Expression], *system: Any, **past: Any) -> list[Expression]:
+        """The components of a vector ARMA system of unit normals: see `vector.components`."""
+        return vector.components(self, noises, *system, **past)
 
     def chain(self, key: str, law: Any, p: float, r: float) -> Expression:
         """0 or 1 by a stationary chain, driven by the stream `key`: 1 with probability p, autocorrelations r^lag."""

@@ -29,7 +29,7 @@ LONGEST_MARCH = 500_000  # steps taken one by one while the variance of a source
 Distinct = tuple[np.ndarray, np.ndarray]
 
 
-@dataclass
+@dataclass(eq=False)
 class System:
     """A linear state space; `sources` name the columns of B and the rows of `noise` (their covariance).
 
@@ -55,6 +55,11 @@ class System:
             if chosen.any():
                 out[chosen] = self._ordered(row, other, early[chosen], (late - early)[chosen])
         return out
+
+    def carried(self, i: int, state: np.ndarray, gaps: np.ndarray) -> np.ndarray:
+        """y_i as many steps after a state as `gaps` (int64, any shape) say, when there are no shocks."""
+        distinct, which = np.unique(gaps, return_inverse=True)
+        return (self._rows(self.observation[i], distinct) @ state)[which].reshape(np.shape(gaps))
 
     def _ordered(self, late: int, early: int, steps: np.ndarray, gaps: np.ndarray) -> np.ndarray:
         """Cov(y_late(step + gap), y_early(step))."""
@@ -161,12 +166,54 @@ def system_of(space: Space, forms: Sequence[Linear]) -> System:
 
     Raises Unknown where a covariance of the sources is not known, or the state would be too large.
     """
+    filters = [Linear({key: c for key, c in form.items() if _whole(key) is None}) for form in forms]
+    joined = _of_filters(space, filters)
+    for whole in dict.fromkeys(whole for form in forms for key in form if (whole := _whole(key))):
+        rows = np.zeros((len(forms), len(whole.transition)))
+        for row, form in zip(rows, forms, strict=True):
+            for key, c in form.items():
+                if _whole(key) is whole:
+                    row += c * whole.observation[_component(key)]
+        joined = _beside(joined, whole, rows)
+    return joined
+
+
+def _whole(key: Key) -> System | None:
+    """The state space that a key is a component of, where its source is one."""
+    return getattr(base_of(key).source.detail, "system", None)
+
+
+def _component(key: Key) -> int:
+    base = base_of(key)
+    if not isinstance(key, At) or key.delay or base.phi:
+        raise Unknown(f"a delay, a running sum or a filter of a component of {base.source.detail.name}")
+    return int(base.source.detail.row)
+
+
+def _beside(one: System, other: System, rows: np.ndarray) -> System:
+    """Both state spaces, independent of each other, seen together."""
+    from scipy.linalg import block_diag
+
+    return System(
+        block_diag(one.transition, other.transition),
+        block_diag(one.loading, other.loading),
+        np.concatenate([one.observation, rows], axis=1),
+        block_diag(one.initial, other.initial),
+        block_diag(one.noise, other.noise),
+        (*one.sources, *other.sources),
+        one.noise_path,
+        one.settles,
+    )
+
+
+def _of_filters(space: Space, forms: Sequence[Linear]) -> System:
     layout = _Layout(forms)
     n = layout.size
     if n > LARGEST_STATE:
         raise Unknown(f"its state has {n} elements, more than {LARGEST_STATE}")
     sources = list(dict.fromkeys(base.source for base in layout.depth))
     noise = np.array([[space.covariance(a, b) for b in sources] for a in sources])
+    noise = noise.reshape(len(sources), len(sources))
     transition, loading = np.zeros((n, n)), np.zeros((n, len(sources)))
     for base, depth in layout.depth.items():
         at = layout.place[At(base, 0)]

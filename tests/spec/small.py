@@ -56,6 +56,10 @@ class Kind:
     def check(cls, values):
         return ()
 
+    @classmethod
+    def outputs_of(cls, values):
+        return cls.outputs
+
 
 SD = Parameter("sd", "σ", Real(above=0), "standard deviation of the shock", default=None, per="diffusion")
 TOTAL_SD = Parameter("total_sd", "σ", Real(above=0), "standard deviation of the term", default=None)

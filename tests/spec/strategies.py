@@ -20,7 +20,7 @@ from procgen.spec.declare import (
     Whole,
 )
 from procgen.spec.local import CalendarDays, EveryYear
-from procgen.spec.named import Named, Names, Rows
+from procgen.spec.named import Matrices, Named, Names, Rows
 
 NOISE = {"white_noise": {"sd": 1}}
 
@@ -55,6 +55,7 @@ def valid(domain, laws):
         Body: st.just([NOISE]),
         CalendarDays: st.just(["2027-12-24", "02-29"]),
         EveryYear: st.just("07-15"),
+        Matrices: st.just([[0.5, 0.1], [0, 0.3]]) | st.just([[[0.5, 0], [0, 0.3]], [[0.1, 0], [0, 0.2]]]),
     }
     return simple[type(domain)]
 

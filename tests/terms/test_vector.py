@@ -1,0 +1,179 @@
+"""Systems of several series: published covariances, statsmodels, and what the drawn values are made of."""
+
+import re
+
+import numpy as np
+import pytest
+from statsmodels.tsa.vector_ar.var_model import VARProcess
+
+from procgen.chance.kernel import available, compiling
+from procgen.spec.model import SpecError
+from procgen.theory import theory
+
+from .helpers import draw, graph_of, jacobian
+
+STEPS = 12
+# Lütkepohl (2005), New Introduction to Multiple Time Series Analysis, sec. 2.1.1 and 2.1.4.
+THREE = "names: [a, b, c], phi: [[0.5, 0, 0], [0.1, 0.1, 0.3], [0, 0.2, 0.3]], sd: [1.5, 1, 0.8602325267042627]"
+CORRELATED = (
+    f"{{vector_arma: {{{THREE}, correlation: [[1, 0, 0], [0, 1, 0.5812381937190965], [0, 0.5812381937190965, 1]]}}}}"
+)
+TWO = "{vector_arma: {names: [a, b], phi: [[[0.5, 0.1], [0.4, 0.5]], [[0, 0], [0.25, 0]]], sd: [0.3, 0.2]}}"
+MIXED = (
+    "{vector_arma: {names: [a, b], phi: [[0.6, 0.3], [-0.2, 0.5]], theta: [[[0.4, 0], [0.1, -0.3]], [[0.2, 0.1], "
+    "[0, 0.3]]], sd: [1, 2], correlation: [[1, -0.4], [-0.4, 1]]}}"
+)
+AVERAGE = "{vector_arma: {names: [a, b], theta: [[0.4, 0.7], [0.1, -0.3]], sd: [1, 2]}}"
+LEFT = (
+    "{vector_arma: {names: [a, b], phi: [[1.1, 0.2], [0, 0.5]], theta: [[0.3, 0], [0, 0.1]], sd: [1, 2], "
+    "before: {x: [[9, 9], [3, -2]], shocks: [[0.5, 1]]}}}"
+)
+PULLED = (
+    "{vector_error_correction: {names: [a, b, c], relations: [[1, -1, 0], [0, 1, -2]], adjustment: [[-0.2, 0], [0.1, "
+    "-0.1], [0, 0.15]], phi: [[0.2, 0, 0], [0, 0.1, 0], [0, 0, 0]], sd: [1, 2, 1], start: [3, 2, 1]}}"
+)
+CASES = {"three": CORRELATED, "two": TWO, "mixed": MIXED, "average": AVERAGE, "left": LEFT, "pulled": PULLED}
+
+
+def system(body, steps=STEPS, series=""):
+    names = re.findall(r"\w+", body.partition("names: [")[2].partition("]")[0])
+    each = "".join(f"  {name}: {{use: w.v.{name}}}\n" for name in names)
+    graph = graph_of(each + series, steps=steps, rest=f"shared:\n  w: [{{{body[1:-1]}, as: v}}]")
+    return graph, theory(graph.spec, graph), names
+
+
+def gamma(known, names, lag):
+    at = np.array([lag])
+    return np.array(
+        [
+            [
+                (known[a].covariance(at, at * 0) if a == b else known.cross(a, b).covariance(at, at * 0))[0]
+                for b in names
+            ]
+            for a in names
+        ]
+    )
+
+
+def test_published_covariances():
+    """Lütkepohl (2005), sec. 2.1.4, to the three decimals that are printed there."""
+    _, known, names = system(CORRELATED)
+    printed = [[3.000, 0.161, 0.019], [0.161, 1.172, 0.674], [0.019, 0.674, 0.954]]
+    np.testing.assert_allclose(gamma(known, names, 0), printed, rtol=0, atol=6e-4)
+    _, known, names = system(TWO)
+    np.testing.assert_allclose(gamma(known, names, 0), [[0.131, 0.066], [0.066, 0.181]], rtol=0, atol=6e-4)
+    np.testing.assert_allclose(gamma(known, names, 1), [[0.072, 0.051], [0.104, 0.143]], rtol=0, atol=6e-4)
+
+
+def test_autocovariances_of_another_library():
+    """statsmodels' VARProcess.acf, which inverts (I - A x A) at once."""
+    coefs = np.array([[[0.5, 0.1], [0.4, 0.5]], [[0, 0], [0.25, 0]]])
+    reference = VARProcess(coefs, np.zeros((2, 1)), np.diag([0.09, 0.04])).acf(8)
+    _, known, names = system(TWO)
+    for lag in range(9):
+        np.testing.assert_allclose(gamma(known, names, lag), reference[lag], rtol=1e-10, atol=1e-14)
+
+
+@pytest.mark.parametrize("name", CASES)
+def test_covariance_of_what_is_drawn(name, monkeypatch):
+    graph, known, names = system(CASES[name])
+    drawn = jacobian(graph, STEPS, monkeypatch)
+    t, s = (a.ravel() for a in np.meshgrid(np.arange(STEPS), np.arange(STEPS)))
+    for a in names:
+        for b in names:
+            exact = (drawn[a] @ drawn[b].T)[t, s]
+            said = known.cross(a, b).covariance(t, s) if a != b else known[a].covariance(t, s)
+            np.testing.assert_allclose(said, exact, rtol=1e-9, atol=1e-11 * float(np.abs(exact).max()))
+
+
+@pytest.mark.parametrize("name", ["three", "two", "mixed", "average"])
+def test_a_deep_lag_reads_the_same_stationary_law_and_moves_nothing(name, monkeypatch):
+    lagged = "  z: {lag: {of: [{use: w.v.b}], by: 6}}\n"
+    graph, known, _ = system(CASES[name], series=lagged)
+    drawn = jacobian(graph, STEPS, monkeypatch)
+    t, s = (a.ravel() for a in np.meshgrid(np.arange(STEPS), np.arange(STEPS)))
+    exact = (drawn["z"] @ drawn["a"].T)[t, s]
+    said = known.cross("z", "a").covariance(t, s)
+    np.testing.assert_allclose(said, exact, rtol=1e-9, atol=1e-11 * float(np.abs(drawn["a"]).max()))
+    alone, both = draw(system(CASES[name])[0], 0, 8, [STEPS]), draw(graph, 0, 8, [STEPS])
+    assert np.array_equal(alone["a"], both["a"]) and np.array_equal(both["z"][6:], both["b"][:-6])
+
+
+@pytest.mark.parametrize("name", ["left", "pulled"])
+def test_means_are_the_recursion_without_shocks(name, monkeypatch):
+    graph, known, names = system(CASES[name], steps=40)
+    values = _still(graph, monkeypatch, 40)
+    for component in names:
+        np.testing.assert_allclose(known[component].mean(np.arange(40)), values[component][:, 0], rtol=1e-12)
+
+
+def _still(graph, monkeypatch, steps):
+    from procgen.chance.laws import LAWS
+
+    with monkeypatch.context() as patch:
+        for law in LAWS.values():
+            patch.setattr(law, "shocks", lambda self, u, out=None: np.zeros_like(u))
+        return draw(graph, 0, 2, [steps])
+
+
+def test_a_relation_is_an_autoregression_of_its_own():
+    """With adjustment (-0.2, 0.1) the spread a - b keeps 1 - 0.3 of itself: from 0, (1 - 0.49^t)/(1 - 0.49) var."""
+    body = "{vector_error_correction: {names: [a, b], relations: [[1, -1]], adjustment: [[-0.2], [0.1]], sd: [1, 0.8]}}"
+    spread = "  z: [{use: w.v.a}, {use: w.v.b, times: -1}]\n"
+    _, known, _ = system(body, series=spread)
+    t = np.arange(STEPS)
+    np.testing.assert_allclose(known["z"].variance(t), 1.64 * (1 - 0.49**t) / 0.51, rtol=1e-12, atol=1e-14)
+    assert known["a"].stationarity.reasons == ("1 unit root in w.v (cointegration rank 1)",)
+
+
+@pytest.mark.skipif(not available(), reason="the speed extra is not installed")
+@pytest.mark.parametrize("name", CASES)
+def test_tiles_and_compiling_move_no_bit(name):
+    graph, _, names = system(CASES[name], steps=40)
+    plain = draw(graph, 3, 9, [40])
+    with compiling(True):
+        compiled = draw(graph, 3, 9, [1, 7, 32])
+    assert all(np.array_equal(plain[component], compiled[component]) for component in names)
+
+
+def test_an_appended_component_moves_nobody():
+    small = "{vector_arma: {names: [a, b], phi: [[0.5, 0.2], [0, 0.4]], sd: [1, 2]}}"
+    large = "{vector_arma: {names: [a, b, c], phi: [[0.5, 0.2, 0], [0, 0.4, 0], [0.3, 0, 0.6]], sd: [1, 2, 1]}}"
+    one, two = (draw(system(body)[0], 0, 8, [STEPS]) for body in (small, large))
+    np.testing.assert_allclose(one["a"], two["a"], rtol=1e-12, atol=1e-13)
+
+
+@pytest.mark.parametrize(
+    ("body", "message"),
+    [
+        (
+            "{vector_arma: {names: [a, b], phi: [[1.2, 0], [0, 0.5]], sd: 1}}",
+            "expected all eigenvalues of the recursion inside the unit circle, got one of size 1.2; shrink phi",
+        ),
+        ("{vector_arma: {names: [a, b], phi: [[0.5, 0.1]], sd: 1}}", "expected matrices of 2 rows of 2"),
+        ("{vector_arma: {names: [a, b], sd: [1, 2, 3]}}", "expected 2 values, one a component, or one for all, got 3"),
+        (
+            "{vector_arma: {names: [a, b], sd: 1, correlation: [[1, 1], [1, 1]]}}",
+            "expected a positive definite correlation, got the smallest eigenvalue",
+        ),
+        (
+            "{vector_arma: {names: [a, b], phi: [[0.5, 0], [0, 0.5]], sd: 1, before: {x: [[1]]}}}",
+            "expected 1 or more rows of 2 past values in `x` (one a matrix of phi), got 1",
+        ),
+        (
+            "{vector_error_correction: {names: [a, b], relations: [[1, -1]], adjustment: [[0.2], [-0.1]], sd: 1}}",
+            "expected as many unit roots as components less relations (1), all else inside the unit circle, got 1 and a "
+            "root of size 1.3; adjust against a relation",
+        ),
+    ],
+)
+def test_refusals_say_what_was_expected(body, message):
+    with pytest.raises(SpecError) as error:
+        system(body)
+    assert message in str(error.value)
+
+
+def test_a_component_that_does_not_exist_is_named():
+    with pytest.raises(SpecError) as error:
+        graph_of("  x: {use: w.v.d}", rest=f"shared:\n  w: [{{{TWO[1:-1]}, as: v}}]")
+    assert "there is no hidden output of w.v named d; expected a or b" in str(error.value)
