@@ -14,6 +14,7 @@ from procgen.report.catalogue import purpose
 from procgen.spec.correlated import FORMS
 from procgen.spec.declare import Body, Real, Schema, mapping, mapping_of, one_or_list
 from procgen.spec.entries import REPLACED, SPREAD
+from procgen.spec.groups import TEMPLATE
 from procgen.spec.parameters import DRAWN
 from procgen.spec.reader import HEAD, SERIES
 from procgen.spec.tables import LOOKUP, TABLE
@@ -32,13 +33,15 @@ def schema() -> Schema:
         "reuse": {"description": "a home for YAML anchors, otherwise ignored"},
         "shared": named({"anyOf": [BODY, mapping({"of": BODY}, ["of"])]}),
         "series": named({"anyOf": [BODY, mapping_of(SERIES)]}),
+        "groups": named(mapping_of((*TEMPLATE, *(p for p in SERIES if p.name not in ("of", "stream"))))),
         "parameters": named({"anyOf": declared()}),
         "correlation": one_or_list({"anyOf": [mapping_of(form) for form in FORMS.values()]}, 0),
     }
     return {
         "$schema": "https://json-schema.org/draft/2020-12/schema",
         "title": "A procgen spec",
-        **mapping(head["properties"] | sections, [*head["required"], "time", "series"]),
+        **mapping(head["properties"] | sections, [*head["required"], "time"]),
+        "anyOf": [{"required": ["series"]}, {"required": ["groups"]}],
         "$defs": {
             "name": {"type": "string", "pattern": "^[A-Za-z_][A-Za-z0-9_]*$"},
             "body": one_or_list({"$ref": "#/$defs/entry"}),

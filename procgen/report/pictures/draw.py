@@ -32,7 +32,7 @@ def picture(source: Path, file: Path, progress: Tick | None = None) -> Path:
     if sort == "html":
         return write(file, _page(source, progress))
     shown = _gallery(source)
-    lines = [f"They show {shown.sample.says}.", "Stated: blue. Seen: ink. What chance allows: grey."]
+    lines = [f"The pictures show {shown.sample.says}.", "Stated: blue. Seen: ink. What chance allows: grey."]
     if sort == "svg":
         from procgen.report.pictures.svg import poster
 

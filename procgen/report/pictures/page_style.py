@@ -22,6 +22,7 @@ nav ul { display: flex; flex-wrap: wrap; gap: .2rem 1.1rem; margin: .8rem 0 0; p
   font: .9rem/1.6 SANS; }
 a { color: var(--stated); }
 section { margin-top: 2.2rem; padding-top: 1.1rem; border-top: 1px solid var(--line); }
+main > section:first-child { margin-top: 1rem; border-top: 0; }
 .unit { color: var(--soft); font-weight: 400; }
 ul.found { padding: 0; list-style: none; margin: .8rem 0; }
 ul.found li { background: var(--card); border: 1px solid var(--line); border-left: .35rem solid var(--alarm);
@@ -62,11 +63,13 @@ footer { margin-top: 2.6rem; border-top: 3px solid var(--ink); padding-top: 1rem
 @media print {
   @page { margin: 14mm; }
   body { max-width: none; padding: 0; background: #fff; font-size: 10.5pt; }
-  section { break-before: auto; margin-top: 1.2rem; } h2, h3, .verdict { break-after: avoid; }
+  section { margin-top: 1.2rem; } h2, h3, .verdict, section > p, section > .found { break-after: avoid; }
+  .series + .series, #checks { break-before: page; }
   .figures { gap: .6rem; grid-template-columns: repeat(2, minmax(0, 1fr)); } figure { padding: .5rem; }
-  figcaption { font-size: 8.5pt; } nav, figure details, summary { display: none; }
-  details::details-content { content-visibility: visible; block-size: auto; }
-  .scroll { overflow: visible; border: 0; } table { font-size: 7.5pt; } td.note { min-width: 0; }
+  figcaption { font-size: 8.5pt; } nav, figure details:not([open]) { display: none; }
+  .scroll { overflow: visible; border: 0; } table { font-size: 7.5pt; }
+  .checks td:nth-child(2), .checks td:nth-child(3) { min-width: 0; }
+  td.note { min-width: 34mm; overflow-wrap: break-word; }
   th, td { padding: .15rem .3rem; } thead { display: table-header-group; } tr, li, pre { break-inside: avoid; }
 }
 """

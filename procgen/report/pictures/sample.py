@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 
 from procgen.report.pictures.safe import many
 
-LIMIT = 1 << 25  # values of all series together that are held: 268 MB
+LIMIT = 1 << 24  # values of all series together that are held: 134 MB
 DRAWN_LIMIT = 1 << 21  # the same for paths that are drawn for a picture only
 DRAWN_PATHS = 200
 STRIP = 400  # steps of a path's parts that are shown

@@ -15,7 +15,7 @@ from procgen.report.pictures.style import FIGURE, variables
 
 WIDE = 4800  # tenths of a unit
 LEFT, RIGHT, BELOW = 620, 4700, 380
-LETTER = 78  # mean width of a letter of the key, where it is set largest
+LETTER = 84  # mean width of a letter of the key, where it is set largest
 KEY, ROW = 60, 190  # where a row of the key begins, and its height
 FAR = 20_000  # how far beyond the frame a coordinate may lie: farther changes nothing that is seen
 
