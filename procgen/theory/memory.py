@@ -15,12 +15,11 @@ LOST = 1e10  # magnification of rounding errors up to which partial autocorrelat
 
 def partial_autocorrelation(x: Expression, lags: np.ndarray) -> np.ndarray:
     """Correlation of x(t + lag) and x(t) given all values between; 1 at lag 0."""
-    last = int(np.max(lags, initial=0))
+    last, known = int(np.max(lags, initial=0)), _of_autoregression(x)
+    if known is not None:
+        return np.array([1.0, *known, 0.0])[np.minimum(lags, len(known) + 1)]
     if last > LONGEST_PARTIAL:
         raise Unknown(f"partial autocorrelations are computed up to lag {LONGEST_PARTIAL}")
-    known = _of_autoregression(x)
-    if known is not None:
-        return np.array([1.0, *known, *[0.0] * last])[lags]
     steps = np.arange(last + 1)
     return _durbin_levinson(x.covariance(x, steps, np.zeros_like(steps)))[lags]
 

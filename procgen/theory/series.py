@@ -15,7 +15,7 @@ from procgen.theory.horizon import Forecast
 from procgen.theory.sources import PROCESS
 from procgen.theory.system import System, system_of
 from procgen.theory.unknown import Unknown
-from procgen.theory.verdict import Stationarity, judge
+from procgen.theory.verdict import INFINITE, Stationarity, judge
 
 WORTH_SAYING = 1e-9 / (100 * np.finfo(float).eps)  # a condition number above this weakens the promised 1e-9
 
@@ -263,8 +263,10 @@ class SeriesTheory:
 
     def _steady(self) -> Expression:
         """The series, for what needs autocovariances that depend on the lag alone."""
-        if not self.stationarity.covariance_stationary:
-            raise Unknown(f"its autocovariances depend on the step: {self.stationarity.reasons[0]}")
+        judged = self.stationarity
+        if not judged.covariance_stationary:
+            why = "it has no autocovariances" if judged.verdict == INFINITE else "its autocovariances depend on the step"
+            raise Unknown(f"{why}: {judged.reasons[0]}")
         return self.expression
 
     def _try(self, name: str, answer: Callable[[], Any]) -> Any:
