@@ -8,7 +8,7 @@ from procgen.chance.elementary import log
 
 _LARGE = 16.0  # from here on the asymptotic series hold to a rounding
 _HALF_LOG_2_PI = 0.9189385332046728
-_STIRLING = (  # B(2n) / (2n (2n - 1)), n from 8 to 1
+STIRLING = (  # B(2n) / (2n (2n - 1)), n from 8 to 1
     -0.029550653594771242,
     0.006410256410256410,
     -0.0019175269175269176,
@@ -39,7 +39,7 @@ def log_gamma(x: float) -> float:
         below = below * x
         x = x + 1.0
     series, square = 0.0, 1.0 / (x * x)
-    for coefficient in _STIRLING:
+    for coefficient in STIRLING:
         series = series * square + coefficient
     return float((x - 0.5) * log(x) - x + _HALF_LOG_2_PI + series / x - log(below))
 

@@ -18,13 +18,14 @@ from procgen.theory.laws import is_gaussian
 from procgen.theory.linear import At, Base, Linear
 from procgen.theory.processes import Chain, Curved, Held, Hinged, Process, mean_at
 from procgen.theory.sources import GARCH, IID, PROCESS, Source, Space, roots
+from procgen.theory.stated import Stating
 from procgen.theory.unknown import Unknown
 from procgen.theory.verdict import CYCLES, LEAVES, UNIT_ROOT, judge
 from procgen.theory.volatile import Volatile
 
 
 @dataclass
-class Axis(Volatile):
+class Axis(Volatile, Stating):
     """The steps of a spec and its sources.
 
     Parameters
@@ -169,8 +170,14 @@ class Axis(Volatile):
         return self.process(Held(self.name, x, step_of, says), path) if x.sources else Expression(self.space, path)
 
     def hinge(self, x: Expression) -> Expression:
-        """max(x, 0): closed where x is known or Gaussian."""
-        return self._of_gaussian(x, lambda v: np.maximum(v, 0.0), Hinged(self.name, x))
+        """max(x, 0): closed where x is known or Gaussian.
+
+        What is mostly above 0 is x + max(-x, 0), whose second part is small: differences of such parts keep digits.
+        """
+        level = x.mean_path.value
+        if level is not None and level > 0.0 and x.sources and not x.terms and is_gaussian(x):
+            return x + self._of_gaussian(x * -1.0, _bent, Hinged(self.name, x * -1.0))
+        return self._of_gaussian(x, _bent, Hinged(self.name, x))
 
     def curved(self, x: Expression, f: Callable[[np.ndarray], np.ndarray]) -> Expression:
         """f(x) for a smooth f of slow growth: by its Hermite series where x is Gaussian."""
@@ -232,6 +239,10 @@ class Axis(Volatile):
         if mean.level or mean.slope or any(piece.key[0] != "past" for piece in mean.pieces):
             raise Unknown("a filter that starts from a given past, of a noise with a mean")
         return _forecast(self.name, phi, theta, tuple(before_x), tuple(before_shocks or ()))
+
+
+def _bent(v: np.ndarray) -> np.ndarray:
+    return np.maximum(v, 0.0)
 
 
 def _mean_path_at(x: Expression, steps: np.ndarray) -> np.ndarray:

@@ -33,6 +33,8 @@ EXEMPT = {
         "equation",
         "check",
         "ahead",
+        "rank",
+        "ranks",
     },
 }
 # Single functions: only whether a spec is accepted, or a length rounded to a power of two, depends on them.
@@ -98,12 +100,20 @@ def fault_of_attribute(node):
     module = isinstance(node.value, ast.Name) and node.value.id in MODULES
     if module and name in ELEMENTARY:
         return f"{node.value.id}.{name}; use procgen.chance.portable"
-    if name in REDUCTIONS and (module or name in {"sum", "cumsum", "prod", "dot", "mean", "std", "reduce"}):
+    if name in REDUCTIONS and module:
         return f"{name}, a reduction in an order that is not ours"
     if name in LIBRARIES:
         return f"{name}, a library whose bits differ"
     if name in GENERATORS and ast.unparse(node.value).split(".")[-1] in {"random", "rng", "generator", "np"}:
         return f"{name}; only raw words of Philox are promised to stay"
+    return None
+
+
+def fault_of_method(function):
+    """What is wrong with calling a method of an array; a parameter or a field may well be named `mean`."""
+    module = isinstance(function.value, ast.Name) and function.value.id in MODULES
+    if function.attr in {"sum", "cumsum", "prod", "dot", "mean", "std", "reduce"} and not module:
+        return f"{function.attr}, a reduction in an order that is not ours"
     return None
 
 
@@ -131,6 +141,8 @@ def fault(node):
         return fault_of_attribute(node)
     if isinstance(node, ast.Import | ast.ImportFrom):
         return fault_of_import(node)
+    if isinstance(node, ast.Call) and isinstance(node.func, ast.Attribute):
+        return fault_of_method(node.func)
     if isinstance(node, ast.Call) and isinstance(node.func, ast.Name) and node.func.id in {"sum", "pow"}:
         return f"Python's {node.func.id}"
     return None

@@ -1,0 +1,93 @@
+"""The law of a sum of normal jumps, a Poisson number of them, beside a normal shock: for theory and checks."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+
+from procgen.chance.laws.mixture import Normals
+from procgen.chance.tables import GRID, Poisson
+
+
+@dataclass(frozen=True)
+class Jumps:
+    """shift + spread·Z + the sum of N normal jumps of a mean and sd, N Poisson of mean `rate` (Merton 1976)."""
+
+    rate: float
+    mean: float
+    sd: float
+    shift: float = 0.0
+    spread: float = 0.0
+
+    @property
+    def parts(self) -> tuple[tuple[float, float, float], ...]:
+        """(chance, mean, standard deviation) for each number of jumps that a uniform sees."""
+        table = Poisson(self.rate).table
+        below = np.concatenate([np.zeros(1), table.places / GRID])
+        chances, counts = (below[1:] - below[:-1]).tolist(), range(table.first, table.first + len(below))
+        return tuple(
+            (p, self.shift + n * self.mean, float(np.sqrt(self.spread * self.spread + n * self.sd * self.sd)))
+            for p, n in zip(chances, counts, strict=False)
+            if p > 0.0
+        )
+
+    def distribution(self, start: float = 0.0) -> Any:
+        """The law, or with a `start` that of start·exp of it: cdf, sf, pdf, ppf, mean, var, and `lump`.
+
+        lump: the chance of the value without shock and jumps (0 beside a shock); cdf counts it from that value on.
+        """
+        from scipy.optimize import brentq
+
+        lumps = [part for part in self.parts if part[2] == 0.0]
+        rest = Normals(tuple(part for part in self.parts if part[2] > 0.0)).distribution()
+        shift, variance = self.shift, self.spread**2 + self.rate * (self.mean**2 + self.sd**2)
+        level = self.shift + self.rate * self.mean
+        mean, var = level, variance
+        if start:
+            once = np.expm1(self.mean + self.sd**2 / 2)
+            twice = np.expm1(2 * self.mean + 2 * self.sd**2)
+            mean = start * np.exp(shift + self.spread**2 / 2 + self.rate * once)
+            var = start**2 * np.exp(2 * shift + 2 * self.spread**2 + self.rate * twice) - mean**2
+
+        class Law:
+            lump = sum(part[0] for part in lumps)
+
+            def _inner(self, x):
+                with np.errstate(divide="ignore", invalid="ignore"):
+                    return np.log(np.maximum(np.asarray(x, float), 0.0) / start) if start else np.asarray(x, float)
+
+            def cdf(self, x):
+                y = self._inner(x)
+                return rest.cdf(y) + self.lump * (y >= shift)
+
+            def sf(self, x):
+                y = self._inner(x)
+                return rest.sf(y) - self.lump * (y >= shift) if self.lump else rest.sf(y)
+
+            def pdf(self, x):
+                return rest.pdf(self._inner(x)) / (np.asarray(x, float) if start else 1.0)
+
+            def ppf(self, p):
+                far = 60.0 * np.sqrt(variance) + 1e-300
+
+                def one(q):
+                    if not 0.0 < q < 1.0:
+                        return -np.inf if q <= 0.0 else np.inf
+                    y = brentq(lambda y: float(rest.cdf(y) + self.lump * (y >= shift)) - q, level - far, level + far)
+                    return y
+
+                y = np.vectorize(one, otypes=[float])(p)
+                return start * np.exp(y) if start else y
+
+            def mean(self):
+                return float(mean)
+
+            def var(self):
+                return float(var)
+
+            def std(self):
+                return float(np.sqrt(var))
+
+        return Law()

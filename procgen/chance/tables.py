@@ -1,0 +1,167 @@
+"""Laws of whole numbers that stay as they are: their chances, and counts by looking a uniform up in a table.
+
+A table holds P(X <= k) on the grid of the uniforms, to the nearest 2**-52: no table could be finer than what it is
+asked for. Chances follow from each other by their ratios, outwards from the most likely number.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from functools import cached_property, lru_cache
+from typing import Any
+
+import numpy as np
+
+from procgen.chance.counting import negative_binomial, poisson
+from procgen.chance.elementary import exp, log, log1p
+from procgen.chance.gamma import log_gamma
+
+Array = np.ndarray
+GRID = 2.0**52
+LONGEST = 1_000_000  # chances in a table
+_PER_ROOT_12 = 0.2886751345948129
+_LEAST = 2.0**-70  # a chance that no uniform sees, far from the likely ones
+
+
+def uniforms(z: Array) -> Array:
+    """The uniforms that standardised ones of the law `uniform` were made of, exactly."""
+    place = np.floor(z * (GRID * _PER_ROOT_12)) + 2.0**51
+    return (np.minimum(np.maximum(place, 0.0), GRID - 1.0) + 0.5) / GRID
+
+
+class Table:
+    """P(X <= k) for k = first, first + 1 … from the chances of these numbers."""
+
+    def __init__(self, chances: Array, first: int = 0):
+        below = np.add.accumulate(chances)  # one after the other, unlike a sum
+        above = np.append(np.add.accumulate(chances[:0:-1])[::-1], 0.0)
+        places = np.where(below < 0.5, np.rint(below * GRID), GRID - np.rint(above * GRID))
+        self.first = first
+        self.places = places.astype(np.int64)
+
+    def counts(self, u: Array) -> Array:
+        """The least numbers that are enough for uniforms u, as float64."""
+        return self.first + np.searchsorted(self.places, np.floor(u * GRID).astype(np.int64), side="right").astype(
+            np.float64
+        )
+
+
+@dataclass(frozen=True)
+class Poisson:
+    """Poisson counts: variance and mean are one."""
+
+    mean: float
+
+    @property
+    def variance(self) -> float:
+        return self.mean
+
+    @property
+    def central(self) -> tuple[float, float, float]:
+        """E (X - mean)^k for k = 2, 3, 4."""
+        return self.mean, self.mean, self.mean + 3.0 * self.mean * self.mean
+
+    @cached_property
+    def table(self) -> Table:
+        m, top = self.mean, int(np.floor(self.mean))
+        middle = exp(top * log(m) - m - log_gamma(top + 1.0))
+        return _table(top, float(middle), lambda k: m / k)
+
+    def counts(self, u: Array, mean: Array | None = None) -> Array:
+        """Counts of uniforms, with this mean or with others."""
+        return self.table.counts(u) if mean is None else poisson(u, mean)
+
+    def distribution(self, mean: float | None = None) -> Any:
+        from scipy import stats
+
+        return stats.poisson(self.mean if mean is None else mean)
+
+
+@dataclass(frozen=True)
+class NegativeBinomial:
+    """Negative binomial counts: variance mean + mean^2 / size; Poisson counts whose mean is gamma of that shape."""
+
+    mean: float
+    size: float
+
+    @property
+    def variance(self) -> float:
+        return self.mean + self.mean * self.mean / self.size
+
+    @property
+    def central(self) -> tuple[float, float, float]:
+        """E (X - mean)^k for k = 2, 3, 4."""
+        m, each = self.mean, self.mean / self.size
+        second = m * (1.0 + each)
+        fourth = second * (1.0 + 6.0 * each * (1.0 + each))
+        return second, second * (1.0 + 2.0 * each), fourth + 3.0 * second * second
+
+    @cached_property
+    def table(self) -> Table:
+        r, q = self.size, self.mean / (self.mean + self.size)
+        top = int(np.floor(max((r - 1.0) * q / (1.0 - q), 0.0)))
+        logs = log_gamma(top + r) - log_gamma(top + 1.0) - log_gamma(r)
+        middle = exp(logs - r * log1p(self.mean / r) - top * log1p(r / self.mean))
+        return _table(top, float(middle), lambda k: (k - 1.0 + r) / k * q)
+
+    def counts(self, u: Array, mean: Array | None = None) -> Array:
+        """Counts of uniforms, with this mean or with others."""
+        return self.table.counts(u) if mean is None else negative_binomial(u, mean, self.size)
+
+    def distribution(self, mean: float | None = None) -> Any:
+        from scipy import stats
+
+        return stats.nbinom(self.size, self.size / (self.size + (self.mean if mean is None else mean)))
+
+
+def _table(top: int, middle: float, ratio: Callable[[float], float]) -> Table:
+    """From the chance of a likely number and ratio(k) = p(k) / p(k - 1), both ways until nothing is left."""
+    upper, chance, k = [middle], middle, top
+    while chance > _LEAST and len(upper) < LONGEST:
+        k += 1
+        chance = chance * ratio(float(k))
+        upper.append(chance)
+    lower, chance, k = [], middle, top
+    while k > 0 and chance > _LEAST:
+        chance = chance / ratio(float(k))
+        k -= 1
+        lower.append(chance)
+    return Table(np.array(lower[::-1] + upper), k)
+
+
+class Thinning:
+    """How many of n are left when each stays with probability alpha: binomial counts of uniforms, for any n.
+
+    All rows lie in one sorted array, row n shifted by n 2**52, so that a look-up takes one search.
+    """
+
+    def __init__(self, alpha: float, most: int):
+        self.most = most
+        row, keys, self.offset = np.ones(1), [], np.zeros(most + 1, np.int64)
+        start, self.first = 0, np.zeros(most + 1, np.int64)
+        for n in range(most + 1):
+            if n:  # each of n stays or goes
+                longer = np.zeros(len(row) + 1)
+                longer[:-1] = (1.0 - alpha) * row
+                longer[1:] = longer[1:] + alpha * row
+                row = longer
+            places = Table(row).places
+            seen = np.flatnonzero((places > 0) & (places < int(GRID)))
+            low = int(np.searchsorted(places, 1))
+            self.first[n], self.offset[n] = low, start
+            keys.append(places[seen] + (n << 52))
+            start += len(seen)
+        self.keys = np.concatenate(keys)
+
+    def counts(self, n: Array, u: Array) -> Array:
+        """How many of n stay, for uniforms u; both of one shape, n whole and at most `most`."""
+        n = n.astype(np.int64)
+        place = np.searchsorted(self.keys, np.floor(u * GRID).astype(np.int64) + (n << 52), side="right")
+        return (place - self.offset[n] + self.first[n]).astype(np.float64)
+
+
+@lru_cache(maxsize=16)
+def thinning(alpha: float, most: int) -> Thinning:
+    """The tables of one probability, made once."""
+    return Thinning(alpha, most)

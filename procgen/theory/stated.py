@@ -1,0 +1,326 @@
+"""Processes whose moments a term states itself, and numbers drawn step by step from a law that follows a body."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from typing import Any
+
+import numpy as np
+
+from procgen.theory import known
+from procgen.theory.expression import Expression, product
+from procgen.theory.known import Known
+from procgen.theory.linear import At, Linear, base_of
+from procgen.theory.processes import Held, Process, alone, at_any, mean_at
+from procgen.theory.sources import Space
+from procgen.theory.unknown import Unknown
+from procgen.theory.verdict import GROWS, VARIES, judge
+
+Steps = np.ndarray
+Covariance = Callable[[Steps, Steps], np.ndarray]
+NODES = 200
+
+
+class Stated(Process):
+    """A process of which its term states the moments, less its mean; see `Stating.stated`."""
+
+    def __init__(
+        self,
+        name: str,
+        ingredients: tuple[Any, ...],
+        covariance: Covariance,
+        law: Callable[[int], Any] | None = None,
+        moment: Callable[[Steps, int, Steps, int], np.ndarray] | None = None,
+        gaussian: bool = False,
+        discrete: bool = False,
+        lumpy: bool = False,
+        grows: str = "",
+        varies: str = "",
+    ):
+        says = tuple((verdict, why) for verdict, why in ((GROWS, grows), (VARIES, varies)) if why)
+        super().__init__(name, ingredients, says)
+        self._covariance, self._law, self._moment = covariance, law, moment
+        self.gaussian, self.discrete, self.lumpy = gaussian, discrete, lumpy or discrete
+
+    def covariance(self, t, s):
+        return self._covariance(t, s)
+
+    def with_process(self, own, other, t, s):
+        if isinstance(other.detail, Held):
+            return other.detail.with_expression(alone_of(self, own), s, t)
+        return super().with_process(own, other, t, s)
+
+    def product(self, factors, t, s):
+        if self._moment is None:
+            return super().product(factors, t, s)
+        (a, scale, back), (b, other, by) = (powers_of(self, factors, side) for side in (0, 1))
+        if a > 2 or b > 2:
+            raise Unknown(f"moments of order {a + b} of {self.name} are not known in closed form")
+        t, s = t - back, s - by
+        zero = np.zeros_like(t)
+        apart = self._moment(t, a, zero, 0) * self._moment(s, b, zero, 0)
+        return scale * other * apart, scale * other * (self._moment(t, a, s, b) - apart)
+
+    def marginal(self, step):
+        return super().marginal(step) if self._law is None else Centred(self._law(step))
+
+
+class Drawn(Process):
+    """Numbers drawn step by step, independently given a body L, less their mean.
+
+    `level` is the mean of a value given L, `path` its mean; `central` (orders 2, 3, 4) has the conditional moments as
+    polynomials in L. What is left of a value beside `level` is uncorrelated with all else.
+    """
+
+    def __init__(
+        self,
+        name: str,
+        driver: Expression,
+        body: Expression,
+        level: Expression,
+        path: Known,
+        central: Sequence[Sequence[float]],
+        law: Callable[[float], Any] | None,
+        discrete: bool,
+        lumpy: bool,
+    ):
+        super().__init__(name, (body, driver))
+        self.driver, self.body, self.level, self.path = driver, body, level, path
+        self.law, self.discrete, self.lumpy = law, discrete, lumpy or discrete
+        self.central = [polynomial(body, each) for each in central]
+
+    def covariance(self, t, s):
+        same = t == s
+        total = at_any(self.level, self.level, t, s) if self.level.sources else np.zeros(t.shape)
+        return total + np.where(same, mean_at(self.central[0], np.where(same, t, 0)), 0.0) if same.any() else total
+
+    def with_expression(self, other, t, s):
+        own = list(self.driver.sources)
+        if any(self.body.space.dependent(source, drawn) for source in other.sources for drawn in own):
+            return super().with_expression(other, t, s)
+        return at_any(self.level, other, t, s)
+
+    def with_process(self, own, other, t, s):
+        if isinstance(other.detail, Held):
+            return other.detail.with_expression(alone_of(self, own), s, t)
+        if isinstance(other.detail, Drawn):
+            drawn = [source for x in (self.driver, other.detail.driver) for source in x.sources]
+            if len(set(drawn)) == len(drawn) and not self.body.space.dependent(*drawn):
+                return at_any(self.level, other.detail.level, t, s)
+            return super().with_process(own, other, t, s)
+        return self.with_expression(alone_of(self, other), t, s)
+
+    def product(self, factors, t, s):
+        """Given L, a power of the value less its mean is a polynomial in L: two of them at most at two steps."""
+        (a, scale, back), (b, other, by) = (powers_of(self, factors, side) for side in (0, 1))
+        if a > 2 or b > 2 or a + b >= self.highest_moment:
+            raise Unknown(f"moments of order {a + b} of {self.name} are not known in closed form, or do not exist")
+        t, s = t - back, s - by
+        m, n, same = self._power(a), self._power(b), t == s
+        apart, cross = mean_at(m, t) * mean_at(n, s), np.zeros(t.shape)
+        if m.sources and n.sources:
+            cross = at_any(m, n, t, s)
+        if a and b and same.any():
+            cross = cross + np.where(same, mean_at(self._more_at_once(a, b), np.where(same, t, 0)), 0.0)
+        return scale * other * apart, scale * other * cross
+
+    def _deviation(self) -> Expression:
+        return self.level + Expression(self.body.space, self.path.scaled(-1.0))
+
+    def _power(self, order: int) -> Expression:
+        """E (x - E x)^order given L, as an expression."""
+        if order == 0:
+            return Expression(self.body.space, known.constant(1.0))
+        if order == 1:
+            return self._deviation()
+        return self.central[0] + product(self.body.space, [self._deviation()] * 2)
+
+    def _more_at_once(self, a: int, b: int) -> Expression:
+        """What E of powers a and b at one step, given L, has beyond the product of both."""
+        two, three, four = self.central
+        deviation, space = self._deviation(), self.body.space
+        if a + b == 2:
+            return two
+        if a + b == 3:
+            return three + product(space, [two, deviation]) * 2.0
+        squares = product(space, [two, two]) * -1.0 + product(space, [two, deviation, deviation]) * 4.0
+        return four + product(space, [three, deviation]) * 4.0 + squares
+
+    def marginal(self, step):
+        from procgen.theory.laws import marginal
+
+        if self.law is None:
+            return super().marginal(step)
+        at = np.array([step], np.int64)
+        if not self.body.sources:
+            return Centred(self.law(float(mean_at(self.body, at)[0])))
+        if not self.discrete:
+            return super().marginal(step)
+        return Centred(Compound(self.law, marginal(self.body, step)))
+
+
+class Stating:
+    """The part of an Axis where terms state what they know themselves."""
+
+    space: Space
+
+    @property
+    def name(self) -> str:
+        """The term at work, as reasons name it."""
+        return self.space.name
+
+    def source(self, key: str, law: Any, sd: float) -> Expression:
+        raise NotImplementedError
+
+    def process(self, process: Process, mean: Known | None = None) -> Expression:
+        raise NotImplementedError
+
+    def stated(self, key: str, driver: Any, mean: Any, covariance: Covariance, **more: Any) -> Expression:
+        """A process driven by the stream `key` of a law, of which all that is known is said.
+
+        mean: a number, or a function of int64 steps. covariance: of two arrays of steps of one shape. Further, where
+        known, `law`: function of a step, the frozen SciPy law of the value; `moment`: function (t, a, s, b) for
+        E (x(t) - E x)^a (x(s) - E x)^b; `gaussian`, `discrete` (whole numbers), `lumpy` (some values have a chance of
+        their own); `grows` or `varies`: why its variance does.
+        """
+        if callable(mean):
+            path = known.observed(("stated", self.name), mean, self.space.horizon, self.name)
+        else:
+            path = known.constant(float(mean))
+        return self.process(Stated(self.name, (self.source(key, driver, 1.0),), covariance, **more), path)
+
+    def drawn(
+        self,
+        key: str,
+        driver: Any,
+        body: Expression,
+        mean: Sequence[float],
+        central: Sequence[Sequence[float]],
+        given: Callable[[float], Any] | None = None,
+        discrete: bool = False,
+        lumpy: bool = False,
+        highest: float = np.inf,
+        beside: Expression | None = None,
+    ) -> Expression:
+        """Values drawn from the stream `key` of a law, independently from step to step given a body.
+
+        Their mean, and their central moments of orders 2, 3 and 4, are polynomials in the body (coefficients, lowest
+        power first); `given` makes the frozen SciPy law at a value of the body; `highest` is the order below which
+        moments exist. `beside` is what else is drawn with them, in ways that have no closed covariance.
+        """
+        level = polynomial(body, mean)
+        path = _mean_path(level, self.name)
+        shocks = self.source(key, driver, 1.0)
+        shocks = shocks if beside is None else shocks + beside
+        process = Drawn(self.name, shocks, body, level, path, central, given, discrete, lumpy)
+        process.highest_moment = float(highest)
+        return self.process(process, path)
+
+
+def _mean_path(level: Expression, name: str) -> Known:
+    """E of an expression at each step, as a known path; recognised where it is constant."""
+    if not level.terms:
+        return level.mean_path
+    if judge(level).covariance_stationary and level.mean_path.value is not None:
+        return known.constant(float(mean_at(level, np.zeros(1, np.int64))[0]))
+    paths = [level.mean_path, *(path for term in level.terms for path in term.knowns)]
+    periods = [path.periods for path in paths if path.periods is not None]
+    still = all(form.is_plain for term in level.terms for form in (*term.factors, term.exponent)) and not any(
+        term.summed for term in level.terms
+    )
+    cycle = frozenset().union(*periods) if still and len(periods) == len(paths) else None
+    notes = "; ".join(dict.fromkeys(note for path in paths for note in path.notes)) or f"the mean moves in {name}"
+    return known.whole(("mean of", name), lambda steps: mean_at(level, np.asarray(steps, np.int64)), cycle, notes)
+
+
+class Centred:
+    """A law less its mean; of whole numbers it keeps `pmf`, and `base` says what is added to them."""
+
+    def __init__(self, law: Any):
+        self.law, self.base = law, float(law.mean())
+        if hasattr(law, "pmf"):
+            self.pmf = lambda x: law.pmf(np.rint(np.asarray(x, float) + self.base))
+
+    def cdf(self, x):
+        return self.law.cdf(np.asarray(x, float) + self.base)
+
+    def sf(self, x):
+        return self.law.sf(np.asarray(x, float) + self.base)
+
+    def pdf(self, x):
+        return self.law.pdf(np.asarray(x, float) + self.base)
+
+    def ppf(self, p):
+        return self.law.ppf(p) - self.base
+
+    def mean(self) -> float:
+        return 0.0
+
+    def var(self) -> float:
+        return float(self.law.var())
+
+
+class Compound:
+    """Whole numbers whose parameter is itself drawn from a continuous law: averages over its quantiles' middle points.
+
+    The parameter's ranks are mapped to normals, where a rule with equal steps is exact to rounding for what is smooth.
+    """
+
+    def __init__(self, law: Callable[[float], Any], of: Any):
+        from scipy.stats import norm
+
+        z = np.linspace(-8.3, 8.3, NODES)
+        weights = np.exp(-z * z / 2.0)
+        self.weights = weights / weights.sum()
+        self.laws = [law(float(x)) for x in np.where(z < 0, of.ppf(norm.cdf(z)), of.isf(norm.sf(z)))]
+
+    def _averaged(self, name: str, x: Any) -> np.ndarray:
+        return sum(w * getattr(each, name)(x) for w, each in zip(self.weights, self.laws, strict=True))
+
+    def pmf(self, x):
+        return self._averaged("pmf", x)
+
+    def cdf(self, x):
+        return self._averaged("cdf", x)
+
+    def sf(self, x):
+        return self._averaged("sf", x)
+
+    def ppf(self, p):
+        top = max(float(each.isf(1e-17)) for each in self.laws)
+        counts = np.arange(top + 1.0)
+        return np.searchsorted(self.cdf(counts), np.asarray(p, float)).astype(float)
+
+    def mean(self) -> float:
+        return float(sum(w * each.mean() for w, each in zip(self.weights, self.laws, strict=True)))
+
+    def var(self) -> float:
+        mean = self.mean()
+        return float(
+            sum(w * (each.var() + (each.mean() - mean) ** 2) for w, each in zip(self.weights, self.laws, strict=True))
+        )
+
+
+def polynomial(x: Expression, coefficients: Sequence[float]) -> Expression:
+    """A polynomial of an expression, lowest power first."""
+    total = Expression(x.space, known.constant(float(coefficients[0])))
+    for power, c in enumerate(coefficients[1:], start=1):
+        if c:
+            total = total + (x if power == 1 else product(x.space, [x] * power)) * float(c)
+    return total
+
+
+def powers_of(process: Process, factors: list[tuple[Linear, int]], side: int) -> tuple[int, float, int]:
+    """How often a process itself is multiplied on a side, times what number, and how many steps ago it is."""
+    forms = [form for form, at in factors if at == side]
+    keys = [(key, c) for form in forms for key, c in form.items()]
+    single = len(keys) == len(forms) and all(base_of(key).source.detail is process for key, _ in keys)
+    delays = {key.delay for key, _ in keys if isinstance(key, At) and not key.base.phi}
+    if not single or len(delays) > 1 or any(not isinstance(key, At) for key, _ in keys):
+        raise Unknown(f"moments of {process.name} at three steps, or with what it depends on, are not known")
+    return len(forms), float(np.prod([c for _, c in keys])), min(delays, default=0)
+
+
+def alone_of(process: Any, source: Any) -> Expression:
+    """A process as an expression, without its mean."""
+    return alone(process.ingredients[0].space, source)
