@@ -68,7 +68,7 @@ def test_the_options_are_those_that_were_promised():
     promised = {
         "render": "-o --paths --first-path --steps --seed --workers --layout --reveal --resume --overwrite --scheduler",
         "validate": "--spec --path-col --step-col --time-col --series-col --false-alarm --json --report",
-        "theory": "--json --at --lags",
+        "theory": "--json --at --lags --frequencies --horizon",
         "digest": "--expect --redraw",
     }
     for name, options in promised.items():
@@ -322,6 +322,9 @@ def test_more_than_the_disk_holds_is_refused_with_the_figure(tmp_path, monkeypat
         ["render", PUMP, "-o", "x", "--reveal", "flow.nothing"],
         ["theory", PUMP, "--at", "one,two"],
         ["theory", PUMP, "--at", "-3"],
+        ["theory", PUMP, "--frequencies", "0,0.6"],
+        ["theory", PUMP, "--frequencies", "nan"],
+        ["theory", PUMP, "--horizon", "0,1"],
         ["validate", "x", "--false-alarm", "2"],
         ["terms", "seasonl"],
         ["digest", "x", "--expect", "abc"],
