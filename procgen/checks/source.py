@@ -194,7 +194,7 @@ def with_revealed(spec: Any, revealed: list[str]) -> tuple[Any, dict[str, str]]:
     raw = copy.deepcopy(dict(spec.raw))
     for column in revealed:
         name = column.replace(".", "__")
-        raw["series"][name] = [{"use": column}]
+        raw.setdefault("series", {})[name] = [{"use": column}]
         try:
             spec = read_spec(raw)
             columns[name] = column

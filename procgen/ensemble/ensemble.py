@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from procgen.ensemble import digest, parquet
+from procgen.ensemble import digest, parquet, revealed
 from procgen.ensemble.columns import Column, as_float
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.manifest import Manifest, bytes_text
@@ -17,6 +17,7 @@ from procgen.ensemble.plan import Block
 from procgen.ensemble.seal import contradictions, refuse_changed, refuse_version
 from procgen.ensemble.source import read_spec
 from procgen.ensemble.store import MANIFEST, PLAN, Folder, folder_path
+from procgen.terms.varied import Varied
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -112,6 +113,24 @@ class Ensemble:
                 rows = values[name][a - block.first_path : b - block.first_path]
                 out[name][a - first : b - first, steps] = rows
         return out
+
+    @property
+    def parameters(self) -> pd.DataFrame:
+        """What was drawn by path: a frame with a row a path, indexed by its number, and a column a parameter."""
+        import pandas as pd
+
+        table = revealed.path_table(Varied(self.spec), self.whole.first_path, self.whole.paths)
+        index = pd.RangeIndex(self.whole.first_path, self.whole.end_path, name="path")
+        return pd.DataFrame(index=index) if table is None else table.to_pandas().set_index("path")
+
+    @property
+    def series(self) -> pd.DataFrame:
+        """A frame with a row a series: its group, attributes, and what was drawn by series."""
+        import pandas as pd
+
+        table = revealed.series_table(Varied(self.spec))
+        index = pd.Index([*self.spec.series], name="series")
+        return pd.DataFrame(index=index) if table is None else table.to_pandas().set_index("series")
 
     def to_arrow(self) -> pa.Table:
         """A table of the long layout: path, step, time (where the spec has a start), then the columns."""

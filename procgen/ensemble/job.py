@@ -9,7 +9,7 @@ from pathlib import Path
 from typing import Any
 
 from procgen.chance.streams import STREAM_VERSION
-from procgen.ensemble import engines, manifest
+from procgen.ensemble import engines, manifest, revealed
 from procgen.ensemble.columns import TYPES, store
 from procgen.ensemble.draw import Drawer, empty
 from procgen.ensemble.engines import Progress
@@ -169,14 +169,19 @@ class Job:
 
     def run(self, workers: int, resume: bool, overwrite: bool, progress: Progress | None) -> OnDisk:
         """Draw what is missing; nothing when all is there."""
-        if not overwrite and (found := self.present.complete(resume, progress)) is not None:
+        if not overwrite and (found := self._complete(resume, progress)) is not None:
             self.folder.tidy()
             return OnDisk(self.folder.path, found, self.spec)
         with self.folder.locked() as descriptor:
             # another render may have finished while this one waited for the lock
-            if overwrite or (found := self.present.complete(resume, progress)) is None:
+            if overwrite or (found := self._complete(resume, progress)) is None:
                 found = self._draw(workers, resume, overwrite, progress, descriptor)
         return OnDisk(self.folder.path, found, self.spec)
+
+    def _complete(self, resume: bool, progress: Progress | None) -> Manifest | None:
+        """The manifest when all is there, parts and tables."""
+        found = self.present.complete(resume, progress)
+        return found if self.factory != FACTORY or revealed.there(self.folder, self.spec) else None
 
     def _draw(
         self, workers: int, resume: bool, overwrite: bool, progress: Progress | None, descriptor: int | None
@@ -198,6 +203,8 @@ class Job:
                 tasks.append(self._task(chain, start))
         done = sum(Block(**record["part"]).rows for record in records)
         records += engines.run(tasks, workers, progress, done, self.whole.rows, descriptor)
+        if self.factory == FACTORY:
+            revealed.write(self.folder, self.spec, self.whole, self.identity)
         made = self._make_manifest(records)
         self.folder.write_json(MANIFEST, made.json())
         self.folder.clean_state(keep_plan=False)

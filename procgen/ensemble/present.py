@@ -7,7 +7,7 @@ from dataclasses import asdict
 from itertools import groupby
 from typing import Any
 
-from procgen.ensemble import parquet
+from procgen.ensemble import parquet, revealed
 from procgen.ensemble.check import Reader, Tick
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.manifest import Manifest, covers
@@ -99,6 +99,7 @@ class Present:
         listed = self._listed()
         ours = [name for name in self.folder.part_files() if name in listed or self._is_ours(name)]
         self.folder.remove([MANIFEST, *ours])
+        revealed.remove(self.folder)
         self.folder.clean_state(keep_plan=False)
 
     def _manifest(self) -> Manifest | None:

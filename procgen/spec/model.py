@@ -107,6 +107,8 @@ class Series:
     stream: str
     note: str | None
     place: Place = field(compare=False)
+    group: str | None = None
+    attributes: Mapping[str, Any] = field(default_factory=Frozen)  # its row in the group's table
 
 
 @dataclass(frozen=True)
@@ -158,7 +160,9 @@ class Spec:
         """
         raw = {key: value for key, value in self.raw.items() if key not in ("title", "reuse")}
         canonical = _normal(raw)
-        canonical["series"] = {name: _normal(_without_note(body)) for name, body in raw["series"].items()}
+        for section in ("series", "groups"):
+            if section in raw:
+                canonical[section] = {name: _normal(_without_note(body)) for name, body in raw[section].items()}
         return canonical
 
     def digest(self) -> str:

@@ -12,11 +12,13 @@ from procgen.spec.calendar import Grid
 from procgen.spec.correlated import read_correlation
 from procgen.spec.declare import INVALID, Body, Choice, Parameter, Real, Text, Whole, read_each
 from procgen.spec.entries import SERIES_KEYS, read_body, read_name
+from procgen.spec.groups import read_groups
 from procgen.spec.links import Links
 from procgen.spec.model import Correlation, Entry, Fault, Frozen, Place, Series, Shared, Spec, SpecError
 from procgen.spec.parameters import Known, read_section, read_varying
 from procgen.spec.timegrid import MOST, read_time
 from procgen.spec.tree import TooMuch, Tree, from_data
+from procgen.spec.varying import Varying
 from procgen.spec.yaml12 import MAX_BYTES, from_text
 
 MAX_FAULTS = 200
@@ -156,7 +158,9 @@ def _spec(tree: Tree, reader: Reader, file: str | None) -> Spec | None:
     terms = reader.open(Known(parameters))
     shared = {name: _shared(name, t, terms) for name, t in _named(tree, "shared", reader).items()}
     series = {name: _series(name, t, terms) for name, t in _named(tree, "series", reader).items()}
-    if not series:
+    if "groups" in tree.value:
+        series = _with_groups(tree.value["groups"], series, reader, parameters)
+    elif not series:
         _need(tree, "series", "a mapping of names to bodies, as in {load: [{white_noise: {sd: 1}}]}", reader)
     _unique(tree, shared, series, reader)
     links = Links({**shared, **series}, reader)
@@ -258,6 +262,19 @@ def _series(name: str, tree: Tree, reader: Reader) -> Series:
     )
 
 
+def _with_groups(
+    tree: Tree, series: dict[str, Series], reader: Reader, parameters: Mapping[str, Varying]
+) -> dict[str, Series]:
+    """Return the series of a spec and after them those of its groups."""
+    members = read_groups(tree, reader, parameters, _series)
+    for name, member in members.items():
+        if name in series or name in RESERVED:
+            what = "a series already" if name in series else "reserved for a column of the ensemble"
+            message = f"the name {name} of a series in {member.group} is {what}; rename it"
+            reader.fault(Tree(None, member.place), message)
+    return {**series, **members}
+
+
 def _has_attributes(tree: Tree, reader: Reader) -> bool:
     """Return whether a series is written in its long form, {of: …, unit: …}."""
     if not tree.is_map or any(key in reader.catalogue for key in tree.value):
@@ -269,14 +286,19 @@ def _unique(tree: Tree, shared: dict[str, Shared], series: dict[str, Series], re
     """Report names and streams that stand for two things."""
     for name in series:
         if name in shared:
-            reader.fault(tree.value["series"].key(name), f"the name {name} is a shared body already; rename one")
+            reader.fault(_series_key(tree, series[name]), f"the name {name} is a shared body already; rename one")
     streams = {name: f"shared body {name}" for name in shared}
     for name, one in series.items():
         if one.stream in streams and name not in shared:
             key = tree.value["series"].value[name].value["stream"] if one.stream != name else None
             message = f"the stream {one.stream} belongs to the {streams[one.stream]}; two would draw the same values"
-            reader.fault(key or tree.value["series"].key(name), f"{message}; choose another")
+            reader.fault(key or _series_key(tree, one), f"{message}; choose another")
         streams.setdefault(one.stream, f"series {name}")
+
+
+def _series_key(tree: Tree, series: Series) -> Tree:
+    """Return where the name of a series is written: its key, or its group."""
+    return Tree(None, series.place) if series.group else tree.value["series"].key(series.name)
 
 
 def _text_of(path: Path) -> str:
