@@ -4,6 +4,7 @@ import json
 
 from hypothesis import strategies as st
 
+from procgen.spec.columns import Column
 from procgen.spec.declare import (
     REQUIRED,
     Body,
@@ -55,6 +56,7 @@ def valid(domain, laws):
         Body: st.just([NOISE]),
         CalendarDays: st.just(["2027-12-24", "02-29"]),
         EveryYear: st.just("07-15"),
+        Column: st.just([3, 5, 4]) | st.just({"first": -1, "numbers": [1, 2.5, 3]}),
         Matrices: st.just([[0.5, 0.1], [0, 0.3]]) | st.just([[[0.5, 0], [0, 0.3]], [[0.1, 0], [0, 0.2]]]),
     }
     return simple[type(domain)]

@@ -1,0 +1,155 @@
+"""A recorded series as a value: numbers written in the spec, or a column of a file beside it, matched by step or time.
+
+As with other tables, what a file says is put into the spec in its place: a spec once read needs no file any more, and
+its digest is one of the numbers.
+"""
+
+from __future__ import annotations
+
+from collections import Counter
+from dataclasses import dataclass
+from datetime import UTC, datetime
+from typing import Any
+
+import numpy as np
+
+from procgen.spec.declare import INVALID, Domain, Parameter, Real, Reals, Schema, Text, Whole, mapping_of, read_each
+from procgen.spec.domains import Reading
+from procgen.spec.tables import MOST_VALUES, read_file
+from procgen.spec.tree import Tree
+from procgen.spec.units import parse_date
+from procgen.spec.words import did_you_mean, one_of
+
+FILE = (
+    Parameter("file", "", Text(), "a CSV or Parquet file, beside the spec"),
+    Parameter("column", "", Text(), "column of the values"),
+    Parameter("step", "", Text(), "column of the steps, whole numbers", default=None),
+    Parameter("time", "", Text(), "column of the times; local where they have no offset", default=None),
+)
+NUMBERS = (
+    Parameter("first", "", Whole(), "the step of the first number, at most 0", default=0),
+    Parameter("numbers", "", Reals(), "the numbers, one a step"),
+)
+
+
+@dataclass(frozen=True)
+class Recorded:
+    """Numbers, one a step, from the step `first` on."""
+
+    first: int
+    numbers: tuple[float, ...]
+
+
+class Column(Domain):
+    """Numbers one a step; read as a Recorded."""
+
+    structured = True
+
+    def describe(self) -> str:
+        return "a list of numbers, or a column of a file such as {file: weather.csv, column: degrees, time: at}"
+
+    def read(self, tree: Tree, reader: Reading) -> Any:
+        if not tree.is_map:
+            numbers = Reals().read(tree, reader)
+            return INVALID if numbers is INVALID else Recorded(0, numbers)
+        before = len(reader.faults)
+        if "file" in tree.value and not self._inlined(tree, reader):
+            return INVALID
+        values = read_each(tree, NUMBERS, reader)
+        if len(reader.faults) > before:
+            return INVALID
+        if values["first"] > 0:
+            return reader.expected(tree.value["first"], "a step of at most 0, so that step 0 has a number")
+        return Recorded(values["first"], values["numbers"])
+
+    def _inlined(self, tree: Tree, reader: Reading) -> bool:
+        """Put the numbers of the file in the place of its name; False after reporting why they cannot be."""
+        before = len(reader.faults)
+        asked = read_each(tree, FILE, reader)
+        if len(reader.faults) == before and (asked["step"] is None) == (asked["time"] is None):
+            reader.expected(tree, "the column of the steps or that of the times, one of them")
+        if len(reader.faults) > before:
+            return False
+        table = read_file(tree.value["file"], reader)
+        by = asked["step"] or asked["time"]
+        if table is INVALID or not all(_has(table, name, tree, reader) for name in (asked["column"], by)):
+            return False
+        steps = _steps(table[by], asked["time"] is not None, tree, reader)
+        numbers = [Real().read(Tree(value, tree.value["column"].place), reader) for value in table[asked["column"]]]
+        if steps is None or INVALID in numbers:
+            return False
+        found = dict(zip(steps, numbers, strict=True))
+        if len(found) < len(steps):
+            double = Counter(steps).most_common(1)[0][0]
+            reader.fault(tree.value["file"], f"the table has two rows for step {double}; keep one")
+            return False
+        return _put(tree, found, reader)
+
+    def schema(self) -> Schema:
+        return {"anyOf": [Reals().schema(), mapping_of(FILE), mapping_of(NUMBERS)]}
+
+
+def _has(table: dict[str, list[Any]], name: str, tree: Tree, reader: Reading) -> bool:
+    if name in table:
+        return True
+    message = f"the table has no column {name}; it has {one_of(table)}; {did_you_mean(name, table)}"
+    reader.fault(tree.value["file"], message.rstrip("; "))
+    return False
+
+
+def _put(tree: Tree, found: dict[int, float], reader: Reading) -> bool:
+    """Write the numbers from the first step that leads up to step 0 without a gap, as far as there is none."""
+    if 0 not in found:
+        reader.fault(tree.value["file"], "the table has nothing for step 0; check its first row and the spec's start")
+        return False
+    first = last = 0
+    while first - 1 in found:
+        first -= 1
+    while last + 1 in found:
+        last += 1
+    steps = reader.grid.steps if reader.grid is not None else 0
+    if last + 1 < min(steps, max(found) + 1):
+        reader.fault(tree.value["file"], f"the table has nothing for step {last + 1}, and more after it; fill the gap")
+        return False
+    place = tree.value["file"].place
+    numbers = tuple([Tree(found[step], place) for step in range(first, last + 1)])
+    tree.value.clear()
+    tree.value.update(first=Tree(first, place), numbers=Tree(numbers, place))
+    return True
+
+
+def _steps(values: list[Any], times: bool, tree: Tree, reader: Reading) -> list[int] | None:
+    """The step of each row, or None after reporting what is none."""
+    grid = reader.grid
+    if not times:
+        wrong = next((v for v in values if isinstance(v, bool) or not isinstance(v, int)), None)
+        if wrong is None:
+            return values
+        _refused(f"whole numbers in column {tree.value['step'].value}", wrong, tree, reader)
+        return None
+    if grid is None:
+        return None
+    if grid.start is None:
+        reader.fault(tree.value["time"], "times need time: {start: …, every: …}; give them, or match by step")
+        return None
+    span = np.arange(-len(values), min(grid.steps, MOST_VALUES) + len(values))
+    by_utc = dict(zip(grid.stamps(int(span[0]), len(span)).tolist(), span.tolist(), strict=True))
+    clocks = grid.local(span + (grid.stamp == "end")).tolist()
+    by_clock = dict(zip(clocks[::-1], span.tolist()[::-1], strict=True))  # of two that happen twice, the first
+    steps = []
+    for value in values:
+        moment = value if isinstance(value, datetime) else parse_date(str(value))
+        if moment is None:
+            _refused(f"a date, or a date and time, in column {tree.value['time'].value}", value, tree, reader)
+            return None
+        known, at = (by_clock, moment.replace(tzinfo=UTC)) if moment.tzinfo is None else (by_utc, moment)
+        step = known.get(round(at.timestamp() * 1e6))
+        if step is None:
+            reader.fault(tree.value["file"], f"no step is at {value}; take that row out, or change the spec's time")
+            return None
+        steps.append(step)
+    return steps
+
+
+def _refused(expected: str, value: Any, tree: Tree, reader: Reading) -> None:
+    reader.fault(tree.value["file"], f"expected {expected}, got {value!r}")
