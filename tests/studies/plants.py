@@ -1,0 +1,193 @@
+"""For every check that prints a smallest departure: a departure of exactly that size, planted by a parameter.
+
+A plant says which row of a verdict it is about, what the spec states, and how to draw values that depart by `size`,
+in the unit of that row's estimate. How a size becomes a parameter is worked out from the law of the values alone:
+by hand, by SciPy's laws, by quadrature, or by sending a covariance through the linear filter that makes the errors.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable
+from dataclasses import dataclass
+from functools import lru_cache
+from typing import Any
+
+import numpy as np
+from scipy import integrate, optimize, stats
+
+from tests.studies.departures import Values, draw, spec_of
+
+PATHS, STEPS = 500, 200
+Planter = Callable[[float, int, int, int], Values]  # size, seed, paths, steps -> values
+
+
+@dataclass(frozen=True)
+class Plant:
+    """A row of the verdict on `stated`, and how to draw values that depart from it by a given size."""
+
+    what: str
+    probe: str
+    stated: Any
+    plant: Planter
+    series: str = "x"
+    by: str = ""  # the parameter that is planted, in words
+
+
+def drawn(body_of: Callable[[float], Any]) -> Planter:
+    """Values of the spec that a size turns into."""
+    return lambda size, seed, paths, steps: draw(spec_of(body_of(size), paths, steps, seed))
+
+
+def spoilt(stated: Any, change: Callable[[np.ndarray, float, np.random.Generator], np.ndarray]) -> Planter:
+    """Values of the stated spec, changed by hand in series x."""
+
+    def plant(size: float, seed: int, paths: int, steps: int) -> Values:
+        values = draw(spec_of(stated, paths, steps, seed))
+        values["x"] = change(values["x"], size, np.random.default_rng(seed))
+        return values
+
+    return plant
+
+
+def noise(sd: float = 1.0, level: float = 0.0, law: Any = "normal") -> list[Any]:
+    return [{"constant": level}, {"white_noise": {"sd": sd, "law": law}}]
+
+
+def ar(phi: float = 0.6, total_sd: float = 1.0, level: float = 0.0, law: Any = "normal") -> list[Any]:
+    return [{"constant": level}, {"ar": {"phi": phi, "total_sd": total_sd, "law": law}}]
+
+
+def t(df: float) -> dict[str, Any]:
+    return {"student_t": {"df": df}}
+
+
+def ma_of(correlation: float, lag: int = 1) -> list[Any]:
+    """White noise with this correlation at one lag, variance 1."""
+    theta = (1 - math.sqrt(1 - 4 * correlation**2)) / (2 * correlation)
+    return [{"constant": 0}, {"ma": {"theta": [0.0] * (lag - 1) + [theta], "total_sd": 1}}]
+
+
+def across(x: np.ndarray, correlation: float, axis: int = 0) -> np.ndarray:
+    """Each row mixed with the one before it, so that neighbours correlate and nothing else changes."""
+    theta = (1 - math.sqrt(1 - 4 * correlation**2)) / (2 * correlation)
+    return (x + theta * np.roll(x, 1, axis=axis)) / math.sqrt(1 + theta**2)
+
+
+def _halves(x: np.ndarray, size: float, axis: int) -> np.ndarray:
+    """+size and -size in turn along an axis, in the shape of x."""
+    signs = size * (1.0 - 2.0 * (np.arange(x.shape[axis]) % 2))
+    return signs[:, None] if axis == 0 else signs[None, :]
+
+
+def shifted(x: np.ndarray, size: float, axis: int) -> np.ndarray:
+    return x + _halves(x, size, axis)
+
+
+def widened(x: np.ndarray, size: float, axis: int) -> np.ndarray:
+    """Variances 1 ± a, whose normal equivalents are of root mean square `size` a shock: (a sqrt(n/2))² = n size²."""
+    return x * np.sqrt(1 + _halves(x, math.sqrt(2) * size, axis))
+
+
+# sizes that are worked out from a law
+
+
+def anderson_darling_shift(size: float, n: int, law: Any = stats.norm) -> float:
+    """The shift whose n ∫ (F − G)² / (G (1 − G)) dG is `size`."""
+
+    def excess(shift: float) -> float:
+        value, _ = integrate.quad(
+            lambda z: (law.cdf(z - shift) - law.cdf(z)) ** 2 / (law.cdf(z) * law.sf(z)) * law.pdf(z), -7, 7, limit=200
+        )
+        return n * value - size
+
+    return float(optimize.brentq(excess, 0.0, 2.0))
+
+
+def score_shift(size: float, column: int, df: float, scaled: bool) -> float:
+    """The shift, or log scale, of a t law at which the mean of a score component is `size`."""
+    from procgen.chance.laws import LAWS
+    from procgen.checks.scores import BINS, Scores
+
+    scores = Scores(LAWS["student_t"](df=df))
+    edges = scores.distribution.ppf(np.arange(BINS + 1) / BINS)
+
+    def mean(x: float) -> float:
+        moved = edges / math.exp(x) if scaled else edges - x
+        return float(np.diff(scores.distribution.cdf(moved)) @ scores.components[:, column])
+
+    sign = 1.0 if mean(0.01) > 0 else -1.0
+    return float(optimize.brentq(lambda x: mean(sign * x) - size, 0.0, 1.0)) * sign
+
+
+@lru_cache(maxsize=8)
+def arch_alpha(size: float) -> float:
+    """The arch coefficient at which cluster scores of neighbouring shocks have the mean product `size`, variance 1."""
+    x, width = np.linspace(-9, 9, 1201, retstep=True)
+    score = math.sqrt(5) * (6 * (stats.norm.cdf(x) - 0.5) ** 2 - 0.5)
+
+    def product(alpha: float) -> float:
+        sd = np.sqrt(1 - alpha + alpha * x * x)
+        kernel = stats.norm.pdf(x[None, :], scale=sd[:, None]) * width  # from row to column
+        density = stats.norm.pdf(x) * width
+        for _ in range(200):
+            density = density @ kernel
+        density /= density.sum()
+        return float((density * score) @ kernel @ score)
+
+    return float(optimize.brentq(lambda alpha: product(alpha) - size, 1e-4, 0.9, xtol=1e-5))
+
+
+def asymmetric(x: np.ndarray, size: float, rng: np.random.Generator) -> np.ndarray:
+    """Normal shocks made wider after positive ones, so that score of size times earlier shock is `size` on average."""
+    nodes, weights = np.polynomial.hermite_e.hermegauss(60)
+    weights = weights / weights.sum()
+
+    def product(kappa: float) -> float:
+        at = np.exp(kappa * nodes - kappa**2)
+        u = stats.norm.cdf(nodes[:, None] * at[None, :])
+        mean = weights @ (math.sqrt(5) * (6 * (u - 0.5) ** 2 - 0.5))
+        return float((weights * nodes) @ mean) * float(weights @ at)
+
+    kappa = optimize.brentq(lambda k: product(k) - size, 1e-5, 0.4)
+    out = x.copy()
+    out[:, 1:] *= np.exp(kappa * x[:, :-1] - kappa**2)
+    return out
+
+
+def shaped(x: np.ndarray, size: float, rng: np.random.Generator) -> np.ndarray:
+    """Normal scores of uniforms whose density is 1 + size · h, h a unit function that is neither level nor spread."""
+    from procgen.chance.laws import LAWS
+    from procgen.checks.scores import BINS, Scores
+
+    density = 1 + size * Scores(LAWS["normal"]()).components[:, 3]
+    edges = np.concatenate([[0.0], np.cumsum(density) / BINS])
+    return stats.norm.ppf(np.interp(rng.random(x.shape), edges, np.arange(BINS + 1) / BINS))
+
+
+def error_moments(stated: Any, drawn_body: Any, steps: int) -> tuple[float, float, float]:
+    """Mean a unit of level, variance, and lag-1 product of the prediction errors of `stated` on values of another spec.
+
+    Errors are a linear map of the values: its matrix comes from unit paths, its moments from the values' covariance.
+    """
+    from procgen.checks.validate import plan_of
+    from procgen.terms.graph import build
+    from procgen.theory import theory
+
+    route = plan_of(spec_of(stated, 8, steps, 1)).routes["x"]
+    unit, at = np.eye(steps), np.arange(steps)
+    mean = theory(spec := spec_of(drawn_body, 8, steps, 1), build(spec))["x"].mean(at)
+    base, _ = route.tile(np.zeros((steps, steps)), route.start(steps), 0, 0)
+    matrix = route.tile(unit, route.start(steps), 0, 0)[0] - base
+    gamma = theory(spec, build(spec))["x"].covariance(at[:, None], at[None, :])
+    errors = matrix @ gamma @ matrix.T
+    offset = matrix @ mean + base[:, 0]
+    return (
+        float(np.mean(offset)),
+        float(np.mean(np.diag(errors) + offset**2)),
+        float(np.mean(np.diag(errors, 1) + offset[1:] * offset[:-1])),
+    )
+
+
+def solve(wanted: float, of: Callable[[float], float], low: float, high: float) -> float:
+    return float(optimize.brentq(lambda x: of(x) - wanted, low, high, xtol=1e-7))
