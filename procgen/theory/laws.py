@@ -75,7 +75,11 @@ class Affine:
 
     def ppf(self, p):
         p = np.asarray(p, float)
-        return self.location + self.scale * (self.law.ppf(p) if self.scale > 0 else self.law.ppf(1.0 - p))
+        return self.location + self.scale * (self.law.ppf(p) if self.scale > 0 else self.law.isf(p))
+
+    def isf(self, p):
+        p = np.asarray(p, float)
+        return self.location + self.scale * (self.law.isf(p) if self.scale > 0 else self.law.ppf(p))
 
     def mean(self) -> float:
         return self.location + self.scale * float(self.law.mean())
