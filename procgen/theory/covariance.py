@@ -42,7 +42,10 @@ def _joint(space: Space, x: Linear, y: Linear, t: np.ndarray, s: np.ndarray) -> 
     forms = (x,) if x == y else (x, y)
     if state_size(forms) > LARGEST_STATE:
         return covariance_by_weights(space, x, y, t, s)
-    flat = system_of(space, forms).covariance(0, len(forms) - 1, t.ravel(), s.ravel())
+    if forms not in space.last:  # many questions in a row are of one series; its powers may be large
+        space.last.clear()
+        space.last[forms] = system_of(space, forms)
+    flat = space.last[forms].covariance(0, len(forms) - 1, t.ravel(), s.ravel())
     return flat.reshape(t.shape)
 
 

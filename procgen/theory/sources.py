@@ -67,6 +67,7 @@ class Space:
     name: str = "the series"  # the term that is at work, for reasons
     sources: dict[str, Source] = field(default_factory=dict)
     origins: dict[Any, str] = field(default_factory=dict)  # where a running sum was written, by its key
+    last: dict[Any, Any] = field(default_factory=dict)  # the state space that was asked last, by its forms
 
     def add(self, source: Source) -> Source:
         if source.key in self.sources:
