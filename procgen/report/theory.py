@@ -47,7 +47,7 @@ def theory_text(
     lines = [head(spec), *equations(spec, WIDTH)]
     for name, facts in told["series"].items():
         lines += ["", *_series(theory[name], facts, spec.series[name].unit, lags)]
-    lines += _cross(told["cross"]) + _correlated(told["correlation"])
+    lines += _cross(told["cross"]) + _correlated(told["correlation"]) + _repaired(spec)
     return "\n".join(lines)
 
 
@@ -227,6 +227,15 @@ def _correlated(entries: Iterable[dict[str, Any]]) -> list[str]:
         text = f"{entry['leader']} leads {entry['follower']}: correlation of the normals {number(entry['normals'])}, "
         lines += _wrapped([text + implied])
     return ["", "shocks that go together", *lines] if lines else []
+
+
+def _repaired(spec: Spec) -> list[str]:
+    stated = spec.raw.get("correlation") or []
+    items = stated if isinstance(stated, list) else [stated]
+    moved = max([item["moved"] for item in items if item.get("moved")], default=None)
+    if moved is None:
+        return []
+    return _wrapped([f"a stated matrix was no correlation; the nearest one moves an entry by up to {number(moved)}"])
 
 
 def _wrapped(texts: Iterable[str]) -> list[str]:

@@ -1,4 +1,4 @@
-"""Reading `correlation`: pairs, matrices with names, groups of equal correlation; and whether they fit together."""
+"""Reading `correlation`: pairs, groups, matrices with names, factors, blocks; and whether they fit together."""
 
 from __future__ import annotations
 
@@ -7,15 +7,17 @@ from typing import Any
 
 import numpy as np
 
-from procgen.spec.declare import INVALID, Domain, Parameter, Reading, Real, Reals, Schema, read_each
+from procgen.spec.declare import INVALID, Domain, Flag, Parameter, Reading, Real, Reals, Records, Schema, read_each
 from procgen.spec.links import Links
 from procgen.spec.model import Correlation
+from procgen.spec.nearest import DECIMALS, nearest
 from procgen.spec.tree import Tree
 from procgen.spec.words import did_you_mean, one_of
 
 Rows = tuple[tuple[float, ...], ...]
 
 MAX_NAMES = 1000
+MOST_REPAIRED = 100
 SMALLEST = 1e-10  # below this a matrix is singular to rounding, and a draw would be a copy of others
 
 
@@ -60,11 +62,30 @@ _VALUE = Parameter("value", "ρ", Real(above=-1.0, below=1.0), "correlation of t
 FORMS = {
     "between": (Parameter("between", "", Names(exactly=2), "the two that are correlated"), _VALUE),
     "within": (Parameter("within", "", Names(), "names of which any two are correlated alike"), _VALUE),
-    "names": (
+    "matrix": (
         Parameter("names", "", Names(), "the rows and columns of the matrix"),
         Parameter("matrix", "R", Matrix(), "correlations of the primary normals, with 1 on the diagonal"),
+        Parameter("repair", "", Flag(), "take the nearest correlation matrix instead of one that is none", False),
+        Parameter("moved", "", Real(at_least=0), "by how much the repair moved an entry; written by it", None),
+    ),
+    "loadings": (
+        Parameter("names", "", Names(), "the rows of the loadings"),
+        Parameter("loadings", "Λ", Matrix(), "what each has of each common factor: R = ΛΛ′ off the diagonal"),
+    ),
+    "blocks": (
+        Parameter(
+            "blocks",
+            "",
+            Records(Parameter("names", "", Names(), "names of which any two are correlated alike"), _VALUE),
+            "groups, each with a correlation of its own",
+        ),
+        Parameter("across", "ρ", Real(above=-1.0, below=1.0), "correlation of any two of different groups", 0.0),
     ),
 }
+WAYS = (
+    "{between: [a.x, b.y], value: 0.3}, {within: […], value: 0.3}, {names: […], matrix: […]}, "
+    "{names: […], loadings: […]} or {blocks: [{names: […], value: 0.5}, …], across: 0.1}"
+)
 
 
 def read_correlation(tree: Tree, links: Links, reader: Reading) -> Correlation:
@@ -85,10 +106,15 @@ def read_correlation(tree: Tree, links: Links, reader: Reading) -> Correlation:
         reader.fault(
             tree,
             f"expected a positive definite correlation, got one whose smallest eigenvalue is {smallest:.3g}; "
-            "bring the values nearer to 0, or to each other",
+            "bring the values nearer to 0, or to each other" + _offer(items),
         )
         return Correlation()
     return Correlation(tuple(pairs.order), tuple(tuple(map(float, row)) for row in matrix))
+
+
+def _offer(items: Sequence[Tree]) -> str:
+    stated = any("matrix" in item.value and "repair" not in item.value for item in items)
+    return ", or add repair: true for the nearest one that is" if stated else ""
 
 
 class _Pairs:
@@ -147,29 +173,84 @@ def _read_item(tree: Tree, pairs: _Pairs, reader: Reading) -> None:
     forms = [form for form in FORMS if tree.is_map and form in tree.value]
     if len(forms) != 1:
         hint = did_you_mean(next(iter(tree.value), None), FORMS) if tree.is_map else ""
-        reader.expected(
-            tree, "{between: [a.x, b.y], value: 0.3}, {within: […], value: 0.3} or {names: […], matrix: […]}", hint
-        )
+        reader.expected(tree, WAYS, hint)
         return
+    before = len(reader.faults)
     values = read_each(tree, FORMS[forms[0]], reader)
-    names = values[forms[0]]
-    if names is INVALID:
+    names = _names(forms[0], values)
+    if names is None:
         return
     places = [pairs.name(name) for name in names]
-    rows = _rows(tree, values, len(names), reader)
-    if rows is None:
-        return
-    for i, first in enumerate(places):
+    rows = _rows(forms[0], tree, values, len(names), reader) if len(reader.faults) == before else None
+    for i, first in enumerate(places if rows else []):
         for j in range(i + 1, len(places)):
+            assert rows is not None
             pairs.add((names[i], names[j]), first, places[j], rows[i][j])
 
 
-def _rows(tree: Tree, values: dict[str, Any], count: int, reader: Reading) -> Rows | None:
+def _names(form: str, values: dict[str, Any]) -> list[Tree] | None:
+    """Return the names of an item as trees, in order; None where they could not be read."""
+    if form == "blocks":
+        blocks = values["blocks"]
+        return None if blocks is INVALID else [name for block in blocks for name in block["names"]]
+    names = values[form if form in ("between", "within") else "names"]
+    return None if names is INVALID else list(names)
+
+
+def _rows(form: str, tree: Tree, values: dict[str, Any], count: int, reader: Reading) -> Rows | None:
     """Return the correlations of the names of an item as a matrix, or None after a fault."""
-    if "matrix" in values:
-        rows = values["matrix"]
-        return rows if rows is not INVALID and _proper(tree.value["matrix"], rows, count, reader) else None
-    return None if values["value"] is INVALID else ((values["value"],) * count,) * count
+    if form == "matrix":
+        return _matrix(tree, values, count, reader)
+    if form == "loadings":
+        return _by_factors(tree, values["loadings"], count, reader)
+    if form == "blocks":
+        group = [i for i, block in enumerate(values["blocks"]) for _ in block["names"]]
+        inside = [block["value"] for block in values["blocks"]]
+        return tuple(tuple(inside[i] if i == j else values["across"] for j in group) for i in group)
+    return ((values["value"],) * count,) * count
+
+
+def _matrix(tree: Tree, values: dict[str, Any], count: int, reader: Reading) -> Rows | None:
+    rows, place = values["matrix"], tree.value["matrix"]
+    if not _proper(place, rows, count, reader):
+        return None
+    if not values["repair"] or float(np.linalg.eigvalsh(np.array(rows))[0]) >= SMALLEST:
+        return rows
+    if count > MOST_REPAIRED:
+        reader.fault(place, f"expected at most {MOST_REPAIRED} names with repair, got {count}; repair parts of it")
+        return None
+    # The repaired matrix takes the place of the stated one in the spec: whoever reads that sees what is drawn.
+    repaired = nearest(np.array(rows))
+    moved = round(float(np.abs(repaired - np.array(rows)).max()), DECIMALS)
+    trees = [tuple([Tree(value, place.place) for value in row]) for row in repaired.tolist()]
+    tree.value["matrix"] = Tree(tuple([Tree(row, place.place) for row in trees]), place.place)
+    tree.value["moved"] = Tree(moved, place.place)
+    return tuple(tuple(row) for row in repaired.tolist())
+
+
+def _by_factors(tree: Tree, loadings: Rows, count: int, reader: Reading) -> Rows | None:
+    """Return ΛΛ′, 1 on the diagonal: sums in order, as everything that values follow from."""
+    place = tree.value["loadings"]
+    if len(loadings) != count or len({len(row) for row in loadings}) != 1:
+        reader.fault(place, f"expected {count} rows, one a name, each with one number a factor; got {len(loadings)}")
+        return None
+    for i, row in enumerate(loadings):
+        share = _product(row, row)
+        if share >= 1.0:
+            hint = "what is left up to 1 is its own; lower its loadings"
+            reader.fault(place.value[i], f"expected squares that sum to less than 1, got {share:g}; {hint}")
+            return None
+    return tuple(
+        tuple(1.0 if i == j else _product(one, other) for j, other in enumerate(loadings))
+        for i, one in enumerate(loadings)
+    )
+
+
+def _product(one: Sequence[float], other: Sequence[float]) -> float:
+    total = 0.0
+    for a, b in zip(one, other, strict=True):
+        total = total + a * b
+    return total
 
 
 def _proper(tree: Tree, rows: Rows, count: int, reader: Reading) -> bool:

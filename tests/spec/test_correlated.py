@@ -1,8 +1,11 @@
 """Correlations: three ways to write them, and how they fail. Eigenvalues of the examples are known in closed form."""
 
+import numpy as np
 import pytest
 
-from tests.spec.small import HEAD, faults, read
+from procgen.spec.correlated import WAYS
+from procgen.spec.reader import read_raw
+from tests.spec.small import CATALOGUE, HEAD, LAWS, faults, read
 
 BODIES = """shared:
   w: {white_noise: {sd: 1}}
@@ -77,11 +80,10 @@ def test_a_matrix_a_group_and_pairs_mean_the_same():
          "(between: the two that are correlated)", "correlation.between:24"),
         ("{within: a, value: 0.1}", 'expected a list of at least two names such as load.arma, got "a" '
          "(within: names of which any two are correlated alike)", "correlation.within:23"),
-        ("{betwen: [a, b], value: 0.1}", "expected {between: [a.x, b.y], value: 0.3}, {within: […], value: 0.3} or "
-         "{names: […], matrix: […]}, got a mapping with the keys betwen, value; did you mean between?",
+        ("{betwen: [a, b], value: 0.1}",
+         f"expected {WAYS}, got a mapping with the keys betwen, value; did you mean between?",
          "correlation:14"),
-        ("5", "expected {between: [a.x, b.y], value: 0.3}, {within: […], value: 0.3} or {names: […], matrix: […]}, "
-         "got 5", "correlation:14"),
+        ("5", f"expected {WAYS}, got 5", "correlation:14"),
         ("{between: [a.white_noise, b.swing]}", "expected the key value (correlation of the primary normals: a number "
          "in (-1, 1))", "correlation:14"),
         ("{names: [a.white_noise, b.swing], matrix: [[1, 0.1]]}", "expected 2 rows of 2 for 2 names, got 1 row of 2",
@@ -107,3 +109,51 @@ def test_too_many_names():
     assert found == [
         "expected at most 1000 correlated names, got 1,001\n  at correlation (a.yaml, line 1007, column 14)"
     ]
+
+
+def test_factors_are_the_products_of_their_loadings():
+    found = correlation("{names: [a.white_noise, b.swing, c.noise], loadings: [[0.8, 0], [0.5, 0.5], [0, 0.6]]}")
+    assert found.matrix == ((1.0, 0.4, 0.0), (0.4, 1.0, 0.3), (0.0, 0.3, 1.0))
+
+
+def test_blocks_have_a_correlation_inside_and_one_across():
+    found = correlation(
+        "{blocks: [{names: [a.white_noise, b.swing], value: 0.6}, {names: [c.noise, w.white_noise], value: 0.2}], "
+        "across: 0.1}"
+    )
+    assert found.matrix == ((1, 0.6, 0.1, 0.1), (0.6, 1, 0.1, 0.1), (0.1, 0.1, 1, 0.2), (0.1, 0.1, 0.2, 1))
+
+
+# Higham (2002), IMA J. Numer. Anal. 22, sec. 4: the nearest correlation to [[1, 1, 0], [1, 1, 1], [0, 1, 1]] has
+# 0.7607 beside the diagonal and 0.1573 in the corner.
+HIGHAM = "{names: [a.white_noise, b.swing, c.noise], matrix: [[1, 1, 0], [1, 1, 1], [0, 1, 1]]"
+
+
+def test_a_matrix_that_is_none_is_repaired_on_request():
+    spec = read(HEAD + BODIES + f"correlation: {HIGHAM}, repair: true}}\n")
+    matrix = np.array(spec.correlation.matrix)
+    np.testing.assert_allclose(matrix[[0, 0, 1], [1, 2, 2]], [0.7607, 0.1573, 0.7607], rtol=0, atol=5e-4)
+    assert np.linalg.eigvalsh(matrix)[0] > 5e-5
+    (item,) = [spec.raw["correlation"]]
+    assert item["matrix"] == matrix.tolist() and item["moved"] == round(1 - matrix[0, 1], 6)
+    again = read_raw(spec.raw, CATALOGUE, LAWS)
+    assert again.correlation == spec.correlation and again.raw == spec.raw
+
+
+def test_without_the_request_it_is_refused_with_the_offer():
+    (found,) = correlation_faults(HIGHAM + "}")
+    assert "smallest eigenvalue is -0.414" in found  # 1 - sqrt(2), known in closed form
+    assert "or add repair: true for the nearest one that is" in found
+
+
+@pytest.mark.parametrize(
+    ("text", "message"),
+    [
+        ("{names: [a.white_noise, b.swing], loadings: [[0.5]]}", "expected 2 rows, one a name, each with one number"),
+        ("{names: [a.white_noise, b.swing], loadings: [[0.8, 0.6], [0.1, 0]]}", "expected squares that sum to less"),
+        ("{names: [a.white_noise, b.swing]}", "expected {between: "),
+    ],
+)
+def test_more_faults(text, message):
+    (found,) = correlation_faults(text)
+    assert found.startswith(message)
