@@ -1,0 +1,205 @@
+"""Conditional variances over drawn parameters: Kronecker systems and closed products in 30 digits, and arch.
+
+The error allowed is max(1e-9, 100 eps kappa), kappa being E h^2 / (E h)^2, which grows without bound towards where
+the fourth moment ends.
+"""
+
+from __future__ import annotations
+
+import mpmath as mp
+import numpy as np
+import pytest
+from arch import arch_model
+from hypothesis import assume, given, settings
+from hypothesis import strategies as st
+
+from procgen.theory import theory
+
+from ..terms.helpers import graph_of
+
+EPS = np.finfo(float).eps
+FAR = 10_000
+LAGS = np.array([0, 1, 2, 3, 40, FAR])
+weights = st.floats(0.01, 0.6)
+models = st.tuples(st.lists(weights, min_size=1, max_size=2), st.lists(weights, max_size=2), st.floats(0.3, 0.9999))
+LAWS = {"normal": 3, "laplace": 6, "{student_t: {df: 9}}": mp.mpf(3) + mp.mpf(6) / 5, "uniform": mp.mpf(9) / 5}
+
+
+def series_of(term):
+    graph = graph_of(f"  x: {{{term}}}")
+    return theory(graph.spec, graph)["x"]
+
+
+class Moments:
+    """E h, E e^4 and Cov(e^2(t + k), e^2(t)) from E[A (x) A] (He & Terasvirta 1999; Hamilton 1994, ch. 21, for A)."""
+
+    def __init__(self, omega, alpha, beta, kurtosis):
+        p, q = len(alpha), max(len(beta), 1)
+        n = p + q - 1
+        fixed, random = mp.zeros(n), mp.zeros(n)
+        for j, b in enumerate(beta):
+            fixed[0, j] = mp.mpf(b)
+        for i, a in enumerate(alpha[1:]):
+            fixed[0, q + i] = mp.mpf(a)
+        random[0, 0] = mp.mpf(alpha[0])
+        for i in [*range(1, q), *range(q + 1, n)]:
+            fixed[i, i - 1] = 1
+        if p > 1:
+            random[q, 0] = 1
+        self.mean, self.start = fixed + random, mp.zeros(n, 1)
+        self.start[0] = mp.mpf(omega)
+        one = mp.eye(n)
+        self.level = mp.lu_solve(one - self.mean, self.start)
+        whole = mp.eye(n * n) - kron(self.mean, self.mean) - (kurtosis - 1) * kron(random, random)
+        known = self.start * self.start.T + self.start * (self.mean * self.level).T
+        known += self.mean * self.level * self.start.T
+        second = mp.lu_solve(whole, mp.matrix([known[i, j] for i in range(n) for j in range(n)]))
+        self.square = second[0]  # E h^2
+        self.fourth = kurtosis * second[0]
+        lead = mp.matrix([second[i * n] for i in range(n)])  # E v h
+        self.ahead = self.start * self.level[0] + (fixed + kurtosis * random) * lead
+
+    def squares(self, lags):
+        out = []
+        for k in lags:
+            if k == 0:
+                out.append(self.fourth - self.level[0] ** 2)
+                continue
+            power = self.mean ** (int(k) - 1)  # E v after a square, less its mean, forgets by the mean of A
+            out.append((power * (self.ahead - self.level * self.level[0]))[0])
+        return out
+
+
+def kron(a, b):
+    n, m = a.rows, b.rows
+    out = mp.zeros(n * m)
+    for i in range(n * m):
+        for j in range(n * m):
+            out[i, j] = a[i // m, j // m] * b[i % m, j % m]
+    return out
+
+
+@settings(max_examples=10, deadline=None, derandomize=True)
+@given(models, st.sampled_from(sorted(LAWS)))
+def test_garch_of_any_order_up_to_where_its_fourth_moment_ends(model, law):
+    alpha, beta, total = model
+    size = (sum(alpha) + sum(beta)) / total
+    alpha, beta = [a / size for a in alpha], [b / size for b in beta]
+    x = series_of(f"garch: {{omega: 0.3, alpha: {alpha}, beta: {beta or [0.0]}, law: {law}}}")
+    with mp.workdps(30):
+        exact = Moments(0.3, alpha, beta, LAWS[law])
+        kappa = float(abs(exact.square) / exact.level[0] ** 2)
+        assert x.variance(3) == pytest.approx(float(exact.level[0]), rel=max(1e-9, 100 * EPS / (1 - total)))
+        kurtosis = exact.fourth / exact.level[0] ** 2 - 3
+        squares = exact.squares(LAGS)
+    if x.excess_kurtosis is None:
+        assert x.highest_moment <= 4.0
+        return
+    allowed = max(1e-9, 100 * EPS * kappa)
+    assert x.highest_moment > 4.0
+    assert x.excess_kurtosis == pytest.approx(float(kurtosis), rel=allowed, abs=allowed)
+    found = x.autocovariance_of_squares(LAGS)
+    np.testing.assert_allclose(found, [float(v) for v in squares], rtol=10 * allowed, atol=1e-12 * float(squares[0]))
+    np.testing.assert_array_equal(x.autocovariance(LAGS)[1:], 0.0)
+
+
+@settings(max_examples=12, deadline=None, derandomize=True)
+@given(st.floats(0.0, 0.3), st.floats(-0.2, 0.3), st.floats(0.0, 0.95), st.sampled_from(sorted(LAWS)))
+def test_threshold_garch_of_symmetric_laws(alpha, gamma, beta, law):
+    """E c and E c^2 by halves: c is beta + alpha z^2 or beta + (alpha + gamma) z^2, either with probability 1/2."""
+    assume(alpha + gamma >= 0.0)
+    with mp.workdps(30):
+        k, sides = LAWS[law], (mp.mpf(alpha), mp.mpf(alpha) + mp.mpf(gamma))
+        first = mp.fsum(beta + a for a in sides) / 2
+        second = mp.fsum(mp.mpf(beta) ** 2 + 2 * a * beta + k * a * a for a in sides) / 2
+        led = mp.fsum(beta + k * a for a in sides) / 2
+        assume(first < 0.999 and abs(second - 1) > 1e-6)
+        mean = 1 / (1 - first)
+        square = (1 + 2 * first * mean) / (1 - second)
+        squares = [k * square - mean**2] + [
+            (mean + led * square - mean**2) * first ** (int(lag) - 1) for lag in LAGS[1:]
+        ]
+    x = series_of(f"gjr_garch: {{omega: 1, alpha: {alpha}, gamma: {gamma}, beta: {beta}, law: {law}}}")
+    assert x.variance(3) == pytest.approx(float(mean), rel=1e-9)
+    if second >= 1:
+        assert x.excess_kurtosis is None and x.highest_moment <= 4.0
+        return
+    allowed = max(1e-9, 100 * EPS / float(1 - second))
+    assert x.excess_kurtosis == pytest.approx(float(k * square / mean**2 - 3), rel=allowed, abs=allowed)
+    found = x.autocovariance_of_squares(LAGS)
+    np.testing.assert_allclose(found, [float(v) for v in squares], rtol=10 * allowed, atol=1e-12 * float(squares[0]))
+
+
+def grown(q, alpha, gamma, power=0):
+    """E z^power exp(q (alpha (abs(z) - sqrt(2/pi)) + gamma z)) of a normal z, power 0 or 2, in closed form."""
+    total = mp.mpf(0)
+    for c in (q * (alpha + gamma), q * (alpha - gamma)):
+        half = mp.exp(c * c / 2) * mp.ncdf(c)
+        total += half if power == 0 else (1 + c * c) * half + c / mp.sqrt(2 * mp.pi)
+    return total * mp.exp(-q * alpha * mp.sqrt(2 / mp.pi))
+
+
+@settings(max_examples=8, deadline=None, derandomize=True)
+@given(st.floats(-0.2, 0.4), st.floats(-0.3, 0.3), st.floats(0.0, 0.97))
+def test_exponential_garch_by_products(alpha, gamma, beta):
+    """Nelson's (1991) products over the past, each factor in closed form, until what is left is below 1e-25."""
+    x = series_of(f"egarch: {{scale: 1.3, alpha: {alpha}, gamma: {gamma}, beta: {beta}}}")
+    with mp.workdps(30):
+        a, g, b = mp.mpf(alpha), mp.mpf(gamma), mp.mpf(beta)
+        count = 2 if b == 0 else int(mp.ceil(mp.log(mp.mpf(10) ** -26) / mp.log(b))) + 2
+
+        def product(q):
+            return mp.fprod(grown(q * b**i, a, g) for i in range(min(count, 3000)))
+
+        level = mp.mpf(1.3) ** 2
+        mean, square = level * product(1), level**2 * product(2)
+        squares = [3 * square - mean**2]
+        for k in (1, 2, 9):
+            now = grown(b ** (k - 1), a, g, 2) * mp.fprod(grown(b**i, a, g) for i in range(k - 1))
+            squares.append(level**2 * now * product(1 + b**k) - mean**2)
+    assert x.variance(3) == pytest.approx(float(mean), rel=1e-9)
+    assert x.excess_kurtosis == pytest.approx(float(3 * square / mean**2 - 3), rel=1e-9, abs=1e-9)
+    found = x.autocovariance_of_squares([0, 1, 2, 9])
+    np.testing.assert_allclose(found, [float(v) for v in squares], rtol=0, atol=1e-9 * float(squares[0]))
+
+
+@settings(max_examples=10, deadline=None, derandomize=True)
+@given(st.floats(0.0, 0.99), st.floats(0.01, 0.5), st.floats(-0.9, 0.9), st.sampled_from([1, 2, 30, FAR]))
+def test_stochastic_volatility_by_one_gaussian_exponent(phi, eta, rho, lag):
+    """ln h(t) + ln h(t + k) and z(t) are jointly normal: E z^2 exp(s) = (1 + Cov(z, s)^2) exp(E s + Var s / 2).
+
+    Variances of the sum are added up shock by shock (Taylor 1994 for the leverage).
+    """
+    x = series_of(f"stochastic_volatility: {{scale: 1.1, phi: {phi}, eta: {eta}, rho: {rho}}}")
+    with mp.workdps(30):
+        f, n, r = mp.mpf(phi), mp.mpf(eta), mp.mpf(rho)
+        own, far = n**2 / (1 - f**2), n**2 * f**lag / (1 - f**2)
+        level = mp.mpf(1.1) ** 2
+        mean = level * mp.exp(own / 2)
+        with_shock = r * n * f ** (lag - 1)  # Cov(z(t), ln h(t + k))
+        both = level**2 * (1 + with_shock**2) * mp.exp(own + far)
+        fourth = 3 * level**2 * mp.exp(2 * own)
+        squares = [fourth - mean**2, both - mean**2]
+    assert x.variance(0) == pytest.approx(float(mean), rel=1e-9)
+    assert x.excess_kurtosis == pytest.approx(float(fourth / mean**2 - 3), rel=1e-9)
+    found = x.autocovariance_of_squares([0, lag])
+    np.testing.assert_allclose(found, [float(v) for v in squares], rtol=1e-9, atol=1e-12 * float(squares[0]))
+
+
+@pytest.mark.parametrize(
+    ("term", "orders", "parameters"),
+    [
+        ("garch: {omega: 0.2, alpha: [0.1, 0.05], beta: [0.3, 0.4], ", (2, 0, 2), [0.2, 0.1, 0.05, 0.3, 0.4]),
+        ("arch: {omega: 0.2, alpha: [0.3, 0.2, 0.1], ", (3, 0, 0), [0.2, 0.3, 0.2, 0.1]),
+        ("gjr_garch: {omega: 0.2, alpha: 0.05, gamma: 0.1, beta: 0.8, ", (1, 1, 1), [0.2, 0.05, 0.1, 0.8]),
+    ],
+)
+def test_variances_from_a_given_past_are_the_forecasts_of_arch(term, orders, parameters):
+    """E h over 30 steps from the last shocks and variances of a series: arch's analytic forecasts."""
+    shocks = np.array([0.3, -1.2, 0.8, 2.1, -0.4, 0.1, -1.7, 0.9, 1.1, -0.6])
+    p, o, q = orders
+    fitted = arch_model(shocks, mean="Zero", vol="GARCH", p=p, o=o, q=q, rescale=False).fix(parameters)
+    forecast = fitted.forecast(horizon=30, reindex=False).variance.to_numpy()[-1]
+    variances = (fitted.conditional_volatility**2).tolist()
+    x = series_of(f"{term}before: {{variance: {variances[-3:]}, shocks: {shocks[-3:].tolist()}}}}}")
+    np.testing.assert_allclose(x.variance(np.arange(30)), forecast, rtol=1e-10)
