@@ -5,17 +5,15 @@ from __future__ import annotations
 from textwrap import wrap
 from typing import Any
 
-from procgen.spec.model import Spec
 from procgen.terms.base import number
 from procgen.terms.combine import Scaled, Sum
-from procgen.terms.graph import Graph, Source, build
+from procgen.terms.graph import Graph, Source
 
 
-def equations(spec: Spec, width: int) -> list[str]:
+def equations(graph: Graph, width: int) -> list[str]:
     """Every shared body and series with what it is the sum of, and the equation of each term."""
-    graph = build(spec)
     lines = []
-    for owner in [*spec.shared, *spec.series]:
+    for owner in [*graph.spec.shared, *graph.spec.series]:
         lines += ["", *_Body(graph, owner).lines(width)]
     return lines
 

@@ -223,13 +223,14 @@ def _dots(mark: Dots, frame: _Frame) -> Iterator[str]:
 
 def _cells(mark: Cells, frame: _Frame) -> Iterator[str]:
     corners = np.asarray(mark.corners, float).reshape(-1, 4)
-    corners = corners[np.isfinite(corners).all(axis=1)]
+    known = np.isfinite(corners).all(axis=1)
+    corners = corners[known]
     x0, x1, y0, y1 = frame.x(corners[:, 0]), frame.x(corners[:, 1]), frame.y(corners[:, 2]), frame.y(corners[:, 3])
     shapes = [f"M{a:.0f} {low:.0f}H{b:.0f}V{high:.0f}H{a:.0f}z" for a, b, low, high in zip(x0, x1, y0, y1, strict=True)]
     if mark.strength is None:
         yield f'<path class="cell {mark.role}" d="{"".join(shapes)}"/>'
         return
-    for shape, ink in zip(shapes, np.asarray(mark.strength, float), strict=True):
+    for shape, ink in zip(shapes, np.asarray(mark.strength, float)[known], strict=True):
         yield f'<path class="cell {mark.role}" style="fill-opacity:{0.04 + 0.66 * min(ink, 1.0):.2f}" d="{shape}"/>'
 
 
