@@ -47,6 +47,7 @@ class Reading(Protocol):
     grid: Grid | None  # None after a fault in `time`
     laws: Mapping[str, Any]
     catalogue: Mapping[str, Any]
+    made: list[Any]  # what was read in place of numbers that vary
 
     def fault(self, tree: Tree, message: str) -> None: ...
     def expected(self, tree: Tree, what: str, hint: str = "") -> Any: ...

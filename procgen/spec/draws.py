@@ -14,6 +14,7 @@ from procgen.spec.tree import Tree
 from procgen.spec.words import did_you_mean, one_of
 
 MOST_TRIALS = 50
+MOST_AWAY = 30.0  # standard deviations: an area of 1e-197, which has all its digits
 FAR = 40.0  # standard deviations: where the rules of a parameter are tried when its law has no bounds
 
 
@@ -81,6 +82,16 @@ def _bound(strict: float | None, loose: float | None) -> float | None:
 _BETWEEN = Parameter("within", "", Interval(), "draws are held between these two (truncated)", default=None)
 
 
+def _reached(low: float, high: float) -> None:
+    """ValueError where a normal law hardly ever lies between two ends, in standard deviations."""
+    nearest = max(low, -high)
+    if nearest > MOST_AWAY:
+        raise ValueError(
+            f"expected `within` to reach where draws are, got an end {nearest:g} standard deviations from the mean "
+            "at the nearest; move it"
+        )
+
+
 @dataclass(frozen=True)
 class UniformDraw(DrawLaw):
     name = "uniform"
@@ -122,6 +133,10 @@ class NormalDraw(DrawLaw):
     def closed(self) -> bool:
         return self.within is not None
 
+    def __post_init__(self) -> None:
+        if self.within is not None:
+            _reached(*((end - self.mean) / self.sd for end in self.within))
+
     def trials(self) -> tuple[float, ...]:
         return (self.mean - FAR * self.sd, self.mean + FAR * self.sd) if self.within is None else self.within
 
@@ -158,6 +173,8 @@ class LognormalDraw(DrawLaw):
     def __post_init__(self) -> None:
         if self.within is not None and self.within[0] <= 0:
             raise ValueError(f"expected `within` above 0 for a lognormal, got {self.within[0]:g}")
+        if self.within is not None:
+            _reached(*(math.log(end / self.median) / self.sigma for end in self.within))
 
     def __str__(self) -> str:
         cut = f" within [{self.low:g}, {self.high:g}]" if self.within else ""

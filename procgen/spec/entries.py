@@ -9,7 +9,7 @@ from procgen.spec.declare import INVALID, Body, Parameter, Real, read_each
 from procgen.spec.domains import Reading, varies
 from procgen.spec.model import Entry, Frozen
 from procgen.spec.tree import NAME, Tree
-from procgen.spec.varying import joint_issues, labelled
+from procgen.spec.varying import found_in, joint_issues, labelled, varying_in
 from procgen.spec.words import did_you_mean, unknown_key
 
 ENTRY_KEYS = ("as", "times")
@@ -108,8 +108,10 @@ class _Terms:
         one_spread = self.kind.takes_shock or len(spread) == 2
         optional = (*REPLACED, *spread) if one_spread else ()
         also = ("shock",) if self.kind.takes_shock else ()
-        before = len(self.reader.faults)
+        before, varying = len(self.reader.faults), len(self.reader.made)
         values = read_each(inner, self.kind.parameters, self.reader, also, optional)
+        if len(self.reader.made) - varying > _varying_in(values):
+            self.reader.fault(inner, "a number in here cannot vary: it is not one that a path could have for itself")
         if one_spread and inner.is_map:
             self._one_spread(inner, spread)
         if "shock" in given:
@@ -228,6 +230,11 @@ def _within(entry: Entry) -> Iterator[tuple[Entry, bool]]:
     for inner, is_shock in children(entry):
         yield inner, is_shock
         yield from _within(inner)
+
+
+def _varying_in(values: Mapping[str, Any]) -> int:
+    """Return how many numbers vary in values and in the entries within them."""
+    return len(found_in(values)) + sum(1 for entry in _entries_in(values) for _ in varying_in(entry))
 
 
 def _entries_in(value: Any) -> Iterator[Entry]:

@@ -52,6 +52,7 @@ class Reader:
         self.grid: Grid | None = None
         self.subject: Parameter | None = None
         self.known: Known | None = None  # what may stand in place of numbers; None where nothing can vary
+        self.made: list[Varying] = []  # what was read in place of numbers
 
     def fault(self, tree: Tree, message: str) -> None:
         """Report what is wrong at a tree; the same fault of an anchored text once."""
@@ -76,7 +77,10 @@ class Reader:
 
     def varying(self, tree: Tree, domain: Real) -> Any:
         """Return what stands at a tree in place of a number, or INVALID after reporting."""
-        return read_varying(tree, domain, self, self.known)
+        found = read_varying(tree, domain, self, self.known)
+        if isinstance(found, Varying):
+            self.made.append(found)
+        return found
 
     def closed(self) -> Reader:
         """Return a reader of numbers that cannot vary."""
