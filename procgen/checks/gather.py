@@ -17,6 +17,7 @@ from procgen.checks.errors import ErrorLane, ErrorSums
 from procgen.checks.probes import CrossPlan, SeriesPlan
 from procgen.checks.recover import Cannot, Expected, Route
 from procgen.checks.shocks import MEMORY_LAGS, CrossSums, ShockLane, ShockSums
+from procgen.checks.squares import SquareLane, Squares, SquareSums
 from procgen.checks.structure import Precision, Structure
 from procgen.checks.sums import Kept, Moments, Powers
 
@@ -34,6 +35,7 @@ class Plan:
     cross: Sequence[CrossPlan]
     routes: Mapping[str, Route | Cannot]
     shock_pairs: Mapping[tuple[str, str], Expected]
+    squares: Mapping[str, Squares] = field(default_factory=dict)
 
     def __post_init__(self) -> None:
         self.names = [plan.name for plan in self.series]
@@ -61,6 +63,7 @@ class Lane:
         self.carriers: dict[str, Any] = {}
         self.shocks: dict[str, ShockLane] = {}
         self.errors: dict[str, ErrorLane] = {}
+        self.squares = {name: SquareLane.start(paths) for name in plan.squares}
         self.carry: dict[tuple[str, str], Any] = {}
 
 
@@ -90,6 +93,7 @@ class Gather:
             s.name: ShockSums(scores[s.name], plan.steps, _lags(s), s.period) for s in plan.series if s.name in scores
         }
         self.errors = {name: ErrorSums() for name in self.routes if name not in scores}
+        self.squares = {name: SquareSums(each) for name, each in plan.squares.items()}
         self.cross = {pair: CrossSums() for pair in plan.shock_pairs}
 
     # blocks
@@ -127,6 +131,8 @@ class Gather:
                 x = np.where(np.isfinite(x), x, np.nan)  # named there; from here on the path is left out
             self._probe(lane, column, x)
             self._pool(lane, column, x)
+            if plan.name in self.squares:
+                self.squares[plan.name].absorb(x, lane.step, lane.squares[plan.name])
             if not self.plan.precision[column].random:
                 self._compare(plan, x, lane.step)
             if plan.name in self.shocks:
@@ -225,6 +231,8 @@ class Gather:
             self.shocks[name].finish(shock_lane)
         for name, error_lane in lane.errors.items():
             self.errors[name].finish(error_lane)
+        for name, square_lane in lane.squares.items():
+            self.squares[name].finish(square_lane)
 
     def finish(self) -> None:
         """To be called after the last block; counts paths that never reached the last step."""
@@ -248,6 +256,8 @@ class Gather:
             shocks.merge(other.shocks[name])
         for name, errors in self.errors.items():
             errors.merge(other.errors[name])
+        for name, squares in self.squares.items():
+            squares.merge(other.squares[name])
         for pair, products in self.cross.items():
             products.merge(other.cross[pair])
 

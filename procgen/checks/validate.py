@@ -15,6 +15,7 @@ from procgen.checks.judge_moments import cross_moments, moment_checks
 from procgen.checks.judge_shocks import cross_checks, shock_checks
 from procgen.checks.probes import PAIR_LIMIT, SeriesPlan, plan_cross, plan_series
 from procgen.checks.recover import Cannot, Expected, Route, expected, route
+from procgen.checks.squares import plan_squares
 from procgen.checks.structure import Precision
 from procgen.checks.verdict import Check, Verdict
 
@@ -102,7 +103,9 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
         precision.append(Precision(name, declared.type, declared.decimals, random, th[name].discrete))
     ways = [way for way in routes.values() if isinstance(way, Route) and way.scores is not None]
     pairs = {(a.series, b.series): expected(a, b, th.axis.space) for a, b in list(combinations(ways, 2))[:PAIR_LIMIT]}
-    return Plan(steps, series, precision, plan_cross(series, th.cross), routes, pairs)
+    blind = [name for name, way in routes.items() if isinstance(way, Cannot) or way.scores is None]
+    squares = {name: found for name in blind if (found := plan_squares(th[name], steps)) is not None}
+    return Plan(steps, series, precision, plan_cross(series, th.cross), routes, pairs, squares)
 
 
 def grain_of(declared: Any, theory: Any, steps: int) -> float:
@@ -142,6 +145,8 @@ def judged(gather: Gather) -> Iterator[Check]:
             continue
         yield from moment_checks(gather, column)
         yield from _shocks(gather, series.name)
+        if series.name in gather.squares and not series.unknown:
+            yield from gather.squares[series.name].checks(series.name)
     for place in range(len(plan.cross)):
         yield from cross_moments(gather, place)
     pairs = math.comb(len(plan.series), 2)
