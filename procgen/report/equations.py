@@ -5,15 +5,17 @@ from __future__ import annotations
 from textwrap import wrap
 from typing import Any
 
+from procgen.spec.model import Spec
 from procgen.terms.base import number
 from procgen.terms.combine import Scaled, Sum
-from procgen.terms.graph import Graph, Source
+from procgen.terms.graph import Graph, Source, build
 
 
-def equations(graph: Graph, width: int) -> list[str]:
-    """Every shared body and series with what it is the sum of, and the equation of each term."""
+def equations(spec: Spec, width: int, graph: Graph | None = None) -> list[str]:
+    """Every shared body and series with what it is the sum of, and the equation of each term; of a graph if there."""
+    graph = graph or build(spec)
     lines = []
-    for owner in [*graph.spec.shared, *graph.spec.series]:
+    for owner in [*spec.shared, *spec.series]:
         lines += ["", *_Body(graph, owner).lines(width)]
     return lines
 

@@ -44,7 +44,7 @@ def theory_text(
 ) -> str:
     """Equations, verdicts and moments, for a person to read; spectral densities where frequencies are given."""
     told = _told(spec, theory, at, [0, *some(lags + 1)[1:]], frequencies or (), horizons)
-    lines = [head(spec), *equations(theory.graph, WIDTH)]
+    lines = [head(spec), *equations(spec, WIDTH, theory.graph)]
     for name, facts in told["series"].items():
         lines += ["", *_series(theory[name], facts, spec.series[name].unit, lags)]
     lines += _cross(told["cross"]) + _correlated(told["correlation"]) + _repaired(spec)

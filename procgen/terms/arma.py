@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from functools import cached_property
 from typing import ClassVar
 
 import numpy as np
@@ -116,8 +117,10 @@ class Arma(Term):
 
     def burn(self):
         """Steps after which an AR filter has forgotten its start; a moving average has none to forget."""
-        if not self.phi or self.before is not None:
-            return 0
+        return 0 if not self.phi or self.before is not None else self._memory
+
+    @cached_property
+    def _memory(self):
         return decay_length(companion(self.phi, (), len(self.phi), 0)[0])
 
     def reach(self, head):

@@ -36,6 +36,7 @@ class Theory(Mapping[str, SeriesTheory]):
     series: dict[str, SeriesTheory]
     names: tuple[str, ...] = ()  # of `correlation`, the leader first
     axis: Axis = field(default_factory=Axis)
+    graph: Any = None  # of the terms that it is the theory of
 
     def __getitem__(self, name: str) -> SeriesTheory:
         if name not in self.series:
@@ -135,7 +136,7 @@ def theory(spec: Any, graph: Any = None) -> Theory:
     axis = Axis(spec.time.steps, correlation)
     memo: dict[int, Expression] = {}
     series = {name: SeriesTheory(name, _moments(axis, graph.series[name], memo)) for name in spec.series}
-    return Theory(series, tuple(names), axis)
+    return Theory(series, tuple(names), axis, graph)
 
 
 def _moments(axis: Axis, node: Any, memo: dict[int, Expression]) -> Any:
