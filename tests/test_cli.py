@@ -57,7 +57,7 @@ def rendered(tmp_path) -> Path:
 
 def test_help_names_every_command_and_shows_an_example_of_each():
     text = Result("-h").out
-    for name in ("render", "validate", "theory", "terms", "schema", "digest"):
+    for name in ("render", "validate", "picture", "theory", "terms", "schema", "digest"):
         assert f"  {name} " in text
         page = Result(name, "--help").out
         assert f"procgen {name}" in page.partition("Example")[2]

@@ -1,0 +1,132 @@
+"""`procgen picture` and `validate --report`: what they write, and what they say when they cannot."""
+
+import builtins
+import json
+import os
+import subprocess
+import sys
+from pathlib import Path
+
+import pytest
+from typer.testing import CliRunner
+
+from procgen.cli import app
+from tests.report.pages import drawing, self_contained
+
+PUMP = str(Path(__file__).parent.parent.parent / "specs" / "pump-flow.yaml")
+
+
+class Result:
+    """Exit code, standard output and standard error of one call in this process."""
+
+    def __init__(self, *args: object):
+        found = CliRunner().invoke(app, [str(arg) for arg in args], catch_exceptions=False)
+        self.code, self.out, self.err = found.exit_code, found.stdout, found.stderr
+
+    def refused(self) -> str:
+        assert (self.code, self.out) == (2, "")
+        return self.err
+
+
+@pytest.fixture(scope="module")
+def out(tmp_path_factory) -> Path:
+    folder = tmp_path_factory.mktemp("ensemble") / "pump"
+    assert Result("render", PUMP, "-o", folder, "--paths", 40, "--steps", 60, "--reveal", "all").code == 0
+    return folder
+
+
+def test_a_spec_becomes_a_page_or_an_svg(tmp_path):
+    page = tmp_path / "pump.html"
+    assert Result("picture", PUMP, "-o", page).out == f"picture: {page}\n"
+    found = self_contained(page.read_text(encoding="utf-8"))
+    assert "200 paths drawn for this picture" in " ".join(found.text) and "Checks" not in " ".join(found.text)
+    assert Result("picture", PUMP, "-o", tmp_path / "pump.SVG").code == 0
+    drawing((tmp_path / "pump.SVG").read_text(encoding="utf-8"))
+    assert sorted(path.name for path in tmp_path.iterdir()) == ["pump.SVG", "pump.html"]
+
+
+def test_an_ensemble_becomes_a_page_with_its_verdict(out, tmp_path):
+    page = tmp_path / "pump.html"
+    page.write_text("what was there before")
+    assert Result("picture", out, "-o", page).code == 0
+    text = " ".join(self_contained(page.read_text(encoding="utf-8")).text)
+    assert "all 40 paths" in text and "Checks, the largest disagreement first" in text and "Parts of one path" in text
+
+
+def test_a_png_by_matplotlib(out, tmp_path):
+    pytest.importorskip("matplotlib", reason="the extra plots is not installed")
+    from matplotlib import image
+
+    assert Result("picture", out, "-o", tmp_path / "pump.png").code == 0
+    pixels = image.imread(tmp_path / "pump.png")
+    assert pixels.shape[1] > 1000 and pixels.shape[0] > 1200
+    assert pixels.min() < 0.2 and pixels.max() == 1.0 and 0.005 < (pixels[..., 0] < 0.5).mean() < 0.5
+
+
+def test_without_matplotlib_a_png_says_how_to_get_it(out, tmp_path, monkeypatch):
+    real = builtins.__import__
+
+    def without(name, *args, **kwargs):
+        if name.startswith("matplotlib"):
+            raise ImportError(name)
+        return real(name, *args, **kwargs)
+
+    monkeypatch.setattr(builtins, "__import__", without)
+    said = Result("picture", out, "-o", tmp_path / "pump.png").refused()
+    assert "pip install '.[plots]'" in said and "write .svg or .html, which need nothing" in said
+    assert list(tmp_path.iterdir()) == []
+
+
+@pytest.mark.parametrize(
+    ("source", "file", "says"),
+    [
+        (PUMP, "pump.jpg", "expected a file that ends in .html, .svg or .png, got 'pump.jpg'"),
+        (PUMP, "pump", "expected a file that ends in .html, .svg or .png, got 'pump'"),
+        (PUMP, "no/pump.html", "there is no folder {tmp}/no to write pump.html into; make it first"),
+        (PUMP, "folder", "{tmp}/folder is a folder; give the name of a file in it, such as {tmp}/folder/picture.html"),
+        ("absent.yaml", "a.html", "there is no file or folder absent.yaml; give a spec, or the folder of a render"),
+        ("{tmp}/folder", "a.svg", "{tmp}/folder has no manifest.json; expected a folder that procgen render has made"),
+        ("{tmp}/t.csv", "a.html", "procgen validate {tmp}/t.csv --spec SPEC --report FILE.html"),
+        ("{tmp}/bad.yaml", "a.html", "expected"),
+    ],
+)
+def test_errors_teach(source, file, says, tmp_path):
+    (tmp_path / "folder").mkdir()
+    (tmp_path / "t.csv").write_text("path,step,flow\n0,0,1\n")
+    (tmp_path / "bad.yaml").write_text("procgen: 1\n")
+    said = Result("picture", source.format(tmp=tmp_path), "-o", tmp_path / file).refused()
+    assert says.format(tmp=tmp_path) in said and "fault in procgen" not in said
+    assert not (tmp_path / "a.html").exists()
+
+
+def test_a_folder_that_may_not_be_written_is_named(tmp_path):
+    if os.geteuid() == 0:
+        pytest.skip("root may write anywhere")
+    tmp_path.chmod(0o500)
+    said = Result("picture", PUMP, "-o", tmp_path / "a.html").refused()
+    assert f"{tmp_path / 'a.html'} cannot be written" in said
+
+
+def test_validate_says_where_the_report_is(out, tmp_path):
+    page = tmp_path / "report.html"
+    shown = Result("validate", out, "--false-alarm", "1e-8", "--report", page)
+    assert shown.code in (0, 2) and shown.out.endswith(f"\n\nreport: {page}\n")
+    found = self_contained(page.read_text(encoding="utf-8"))
+    assert "all 40 paths" in " ".join(found.text)
+    data = Result("validate", out, "--false-alarm", "1e-8", "--report", page, "--json")
+    assert json.loads(data.out)["checks"] and data.err == f"procgen: report: {page}\n"
+
+
+def test_a_report_that_cannot_be_written_is_refused_before_the_work(out, tmp_path):
+    said = Result("validate", out, "--report", tmp_path / "report.pdf").refused()
+    assert "expected a file that ends in .html, got 'report.pdf'" in said
+    assert "make it first" in Result("validate", out, "--report", tmp_path / "no" / "r.html").refused()
+
+
+def test_whoever_reads_the_first_line_only_has_the_report_all_the_same(out, tmp_path):
+    page = tmp_path / "report.html"
+    command = [sys.executable, "-m", "procgen", "validate", str(out), "--report", str(page)]
+    with subprocess.Popen(command, stdout=subprocess.PIPE, stderr=subprocess.DEVNULL) as process:
+        assert process.stdout is not None
+        process.stdout.close()
+    assert page.read_text(encoding="utf-8").rstrip().endswith("</html>")
