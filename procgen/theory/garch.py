@@ -15,7 +15,6 @@ Stationarity: Nelson (1990), Econometric Theory 6, 318-334; Bougerol & Picard (1
 
 from __future__ import annotations
 
-import warnings
 from dataclasses import dataclass
 from functools import cached_property
 from itertools import zip_longest
@@ -24,6 +23,7 @@ from typing import Any
 import numpy as np
 
 from procgen.theory.arma import companion, cross_covariance
+from procgen.theory.averages import average
 from procgen.theory.powers import existing_orders
 from procgen.theory.recursion import recursed
 from procgen.theory.transient import Moving, kept_products
@@ -104,7 +104,7 @@ class Garch:
         if len(self.alpha) != 1 or len(self.beta) > 1:
             return None
         a, b = self.alpha[0], self.beta[0] if self.beta else 0.0
-        return expect(self.law, lambda z: np.log(b + a * z * z))
+        return average(self.law, lambda z: np.log(b + a * z * z))
 
     @property
     def strictly_stationary(self) -> tuple[bool | None, str]:
@@ -204,13 +204,6 @@ class Garch:
         return recursed(self.persistence, coming)
 
 
-def expect(law: Any, f: Any) -> float:
-    """E f(z) by the law; near the last moment that exists a quadrature only tells large from small, which is enough."""
-    with warnings.catch_warnings(), np.errstate(over="ignore", invalid="ignore"):
-        warnings.simplefilter("ignore")
-        return float(law.expect(f))
-
-
 def tail_index(law: Any, factor: Any) -> float:
     """Twice the s with E factor(z)^s = 1: the order below which e has moments when h(t+1) = omega + factor(z) h(t)."""
     from scipy.optimize import brentq
@@ -218,7 +211,7 @@ def tail_index(law: Any, factor: Any) -> float:
     highest = min(float(law.highest_moment) / 2.0, HIGHEST)
 
     def excess(s: float) -> float:
-        return expect(law, lambda z: np.exp(np.minimum(s * np.log(factor(z)), 700.0))) - 1.0
+        return average(law, lambda z: np.exp(np.minimum(s * np.log(factor(z)), 700.0))) - 1.0
 
     low, high = 1e-3, 1.0
     while high < highest and excess(min(high, 0.999 * highest)) < 0.0:

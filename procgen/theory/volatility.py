@@ -12,8 +12,9 @@ from typing import Any
 
 import numpy as np
 
+from procgen.theory.averages import average
 from procgen.theory.copula import is_symmetric
-from procgen.theory.garch import HIGHEST, expect, tail_index
+from procgen.theory.garch import HIGHEST, tail_index
 from procgen.theory.processes import Process, Steps
 from procgen.theory.sources import Source
 from procgen.theory.transient import Moving, kept_products
@@ -123,8 +124,8 @@ class Gjr(Volatility):
         kurtosis = np.inf if self.law.excess_kurtosis is None else self.law.excess_kurtosis + 3.0
         if is_symmetric(self.law):
             return 0.5, kurtosis / 2.0
-        second = expect(self.law, lambda z: z**2 if z < 0.0 else 0.0)
-        return second, kurtosis if np.isinf(kurtosis) else expect(self.law, lambda z: z**4 if z < 0.0 else 0.0)
+        second = average(self.law, lambda z: np.where(z < 0.0, z * z, 0.0))
+        return second, kurtosis if np.isinf(kurtosis) else average(self.law, lambda z: np.where(z < 0.0, z**4, 0.0))
 
     @cached_property
     def total(self) -> float:  # type: ignore[override]
@@ -150,15 +151,15 @@ class Gjr(Volatility):
             raise Unknown("infinite fourth moment: E (beta + (alpha + gamma I) z^2)^2 is not below 1")
         return self.omega**2 * (1.0 + self.total) / ((1.0 - self.total) * (1.0 - self.second))
 
-    def factor(self, z: float) -> float:
+    def factor(self, z: np.ndarray) -> np.ndarray:
         """c(z)."""
-        return self.beta + (self.alpha + (self.gamma if z < 0.0 else 0.0)) * z * z
+        return self.beta + (self.alpha + np.where(z < 0.0, self.gamma, 0.0)) * z * z
 
     @cached_property
     def strictly_stationary(self) -> tuple[bool | None, str]:  # type: ignore[override]
         if self.total < 1.0:
             return True, f"E (beta + (alpha + gamma I) z^2) is {self.total:.6g}, below 1"
-        exponent = expect(self.law, lambda z: np.log(self.factor(z)))
+        exponent = average(self.law, lambda z: np.log(self.factor(z)))
         sign = "below" if exponent < 0.0 else "not below"
         return exponent < 0.0, f"E log(beta + (alpha + gamma I) z^2) is {exponent:.6g}, {sign} 0 (Nelson 1990)"
 
