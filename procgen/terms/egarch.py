@@ -9,12 +9,10 @@ import numpy as np
 from procgen.chance.kernel import kernel
 from procgen.chance.portable import exp, log
 from procgen.spec.declare import Parameter, Real
-from procgen.terms.base import LAW, Ahead, Draw, Term, Unknown, number, rows, signed, without_gap
-from procgen.terms.garch import INFINITE
-from procgen.terms.gjr import BEFORE, left_from
+from procgen.terms.base import LAW, Ahead, Unknown, number, signed, without_gap
+from procgen.terms.conditional import BEFORE, FORGOTTEN, INFINITE, Conditional, left_from
 from procgen.terms.start import companion, decay_length
 
-FORGOTTEN = 1e-9
 NEGLIGIBLE = 1e-12
 FAR = 6.0  # standard deviations of a log variance, roughly: where an inversion begins from, on both sides
 
@@ -38,15 +36,11 @@ SCALE = Parameter(
 )
 
 
-class Egarch(Term):
+class Egarch(Conditional):
     kind = "egarch"
-    family = "volatility"
     purpose = "white shocks whose log variance follows the size and sign of the shock before"
     source = "Nelson (1991)"
     example = "egarch: {scale: 1, alpha: 0.2, gamma: -0.1, beta: 0.9}"
-    knows = "variance, kurtosis and autocorrelation of squares where they exist; uncorrelated, not independent"
-    noise = True
-    outputs = ("variance",)
     parameters: ClassVar[tuple[Parameter, ...]] = (
         SCALE,
         Parameter("omega", "ω", Real(), "the constant in the log variance, instead of `scale`", default=None),
@@ -92,22 +86,9 @@ class Egarch(Term):
         """Standard deviation while the log variance is at its mean, in the series' unit."""
         return float(np.sqrt(exp(self.mean_log())))
 
-    def as_member(self):
-        """None: a past that follows the shocks' sizes cannot be drawn with linear terms."""
-        return None
-
-    def draws(self):
-        return (Draw("innovation", self.law),)
-
-    def past(self):
-        return None if self.before is None else min(len(self.before["shocks"]), len(self.before["variance"]))
-
     def burn(self):
         """Steps until the log variance has forgotten where it began, to 1e-12."""
-        return 0 if self.before is not None or not self.beta else decay_length(companion((self.beta,), (), 1, 0)[0])
-
-    def reach(self, head):
-        return (max(self.burn(), head),)
+        return decay_length(companion((self.beta,), (), 1, 0)[0]) if self.beta else 0
 
     def first(self):
         """ln h at step 0, less its mean, that follows from the given past."""
@@ -115,15 +96,11 @@ class Egarch(Term):
         z = e / np.sqrt(h)
         return float(self.beta * (log(h) - self.mean_log()) + self._sides(z))
 
-    def begin(self, before):
-        if self.before is not None:
-            h, past = rows(self.before["variance"]), rows(self.before["shocks"])
-            values = {"": past[len(past) - before.head :], "variance": h[len(h) - before.head :]}
-            return values, {"x": np.full((1, 1), self.first())}
-        (count,) = self.reach(before.head)
-        z = before.inputs[0][len(before.inputs[0]) - count :]
-        values, state = self.recurse((z,), {"x": np.zeros((1, 1))}, None)
-        return {name: rows[count - before.head :] for name, rows in values.items()}, state
+    def rest(self):
+        return {"x": np.zeros((1, 1))}
+
+    def left(self):
+        return {"x": np.full((1, 1), self.first())}
 
     def recurse(self, inputs, state, at):
         z = inputs[0]

@@ -2,18 +2,15 @@
 
 from __future__ import annotations
 
-import math
 from typing import ClassVar
 
 import numpy as np
 
 from procgen.chance.kernel import kernel
-from procgen.spec.declare import Flag, Parameter, Real, Reals, Record
-from procgen.terms.base import LAW, Ahead, Draw, Term, number, rows, signed, stated, without_gap
+from procgen.spec.declare import Parameter, Reals, Record
+from procgen.terms.base import LAW, Ahead, number, rows, signed, stated, without_gap
+from procgen.terms.conditional import FORGOTTEN, INFINITE, OMEGA, SD, Conditional, burn_without_variance
 from procgen.terms.start import companion, decay_length
-
-FORGOTTEN = 1e-9
-BURN_TILE = 128  # steps of a burn-in drawn at once, few enough to stay in cache
 
 
 @kernel
@@ -49,22 +46,6 @@ def variance(omega, alpha, beta, square, h):
 
 ALPHA = Parameter("alpha", "α", Reals(at_least=0), "weights of e²[t−1], e²[t−2], …")
 BETA = Parameter("beta", "β", Reals(at_least=0), "weights of h[t−1], h[t−2], …", default=())
-OMEGA = Parameter("omega", "ω", Real(above=0), "the constant in the variance", default=None, unit="series²")
-SD = Parameter(
-    "sd",
-    "σ",
-    Real(above=0),
-    "unconditional standard deviation, instead of `omega`",
-    default=None,
-    unit="series",
-)
-INFINITE = Parameter(
-    "allow_infinite_variance",
-    "",
-    Flag(),
-    "run a strictly stationary garch without a variance on purpose",
-    default=False,
-)
 BEFORE = Parameter(
     "before",
     "",
@@ -84,30 +65,11 @@ BEFORE = Parameter(
 )
 
 
-def burnt_in(term, before, state):
-    """Values at steps -head .. -1 and the state at step 0, from `state` through the term's burn-in, tile by tile."""
-    (count,) = term.reach(before.head)
-    z, kept = before.inputs[0], []
-    for first in range(len(z) - count, len(z), BURN_TILE):
-        values, state = term.recurse((z[first : min(first + BURN_TILE, len(z))],), state, None)
-        if first + BURN_TILE > len(z) - before.head:
-            kept.append(values)
-    if not before.head:
-        return None, state
-    rows = {name: np.concatenate([part[name] for part in kept]) for name in kept[0]}
-    return {name: part[len(part) - before.head :] for name, part in rows.items()}, state
-
-
-class Garch(Term):
+class Garch(Conditional):
     kind = "garch"
-    family = "volatility"
     purpose = "white shocks whose variance follows the squared shocks before them"
     source = "Bollerslev (1986); arch is its case without beta (Engle 1982); stationarity: Nelson (1990)"
     example = "garch: {sd: 6.3, alpha: 0.1, beta: 0.85}"
-    knows = "variance, kurtosis and autocorrelation of squares where they exist; uncorrelated, not independent"
-    noise = True
-    burns_in = True
-    outputs = ("variance",)
     parameters: ClassVar[tuple[Parameter, ...]] = (OMEGA, SD, ALPHA, BETA, LAW, INFINITE, BEFORE)
 
     @classmethod
@@ -155,13 +117,6 @@ class Garch(Term):
         """Unconditional standard deviation, in the series' unit."""
         return float(np.sqrt(self.resting()))
 
-    def as_member(self):
-        """None: a past that follows the squares cannot be drawn with linear terms."""
-        return None
-
-    def draws(self):
-        return (Draw("innovation", self.law),)
-
     def past(self):
         return None if self.before is None else len(self.before["shocks"])
 
@@ -172,33 +127,18 @@ class Garch(Term):
 
     def burn(self):
         """Steps until the variance has forgotten where it began, to 1e-12."""
-        if self.before is not None:
-            return 0
         weights = self._weights()
         if _sum(weights) < 1.0:
             return decay_length(companion(weights, (), len(weights), 0)[0])
-        # Without a variance: E(β + αz²)^s < 1 for some s < 1 bounds how long the start is felt. The length is
-        # rounded up to a power of two, which no rounding of the expectation can move.
         beta = self.beta[0] if self.beta else 0.0
-        factor = min(
-            self.law.expect(lambda z, s=s: (beta + self.alpha[0] * z * z) ** s) for s in (0.05, 0.1, 0.25, 0.5, 0.75)
-        )
-        return 2 ** min(16, math.ceil(math.log2(math.log(1e-12) / math.log(factor))))
+        return burn_without_variance(self.law, lambda z: beta + self.alpha[0] * z * z)
 
-    def reach(self, head):
-        return (max(self.burn(), head),)
+    def rest(self):
+        """The state to begin from: variances and squares at the unconditional variance."""
+        shape = {"square": len(self.alpha), "h": len(self.beta)}
+        return {name: np.full((count, 1), self.resting()) for name, count in shape.items()}
 
-    def begin(self, before):
-        p, q = len(self.alpha), len(self.beta)
-        if self.before is not None:
-            h, past = rows(self.before["variance"]), rows(self.before["shocks"])
-            values = {"": past[len(past) - before.head :], "variance": h[len(h) - before.head :]}
-            return values, self._given()
-        rest = self.resting()
-        state = {"square": np.full((p, 1), rest), "h": np.full((q, 1), rest)}
-        return burnt_in(self, before, state)
-
-    def _given(self):
+    def left(self):
         """The state just before step 0 that `before` states."""
         p, q = len(self.alpha), len(self.beta)
         h = rows(self.before["variance"])
@@ -215,12 +155,11 @@ class Garch(Term):
 
     def invert(self, values, known, state, at):
         p, q = len(self.alpha), len(self.beta)
-        rest = self.resting()
         values, gap = without_gap(values, self.scale())
         if state is None and self.before is not None:
-            state = {**self._given(), "skip": np.array([0])}
+            state = {**self.left(), "skip": np.array([0])}
         elif state is None:
-            state = {"square": np.full((p, 1), rest), "h": np.full((q, 1), rest), "skip": np.array([0])}
+            state = {**self.rest(), "skip": np.array([0])}
         square = np.concatenate([np.broadcast_to(state["square"], (p, values.shape[1])), values * values])
         h = _buffer(state["h"], values)
         variance(self.level(), np.array(self.alpha), np.array(self.beta), square, h)

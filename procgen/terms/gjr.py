@@ -2,15 +2,23 @@
 
 from __future__ import annotations
 
-import math
 from typing import ClassVar
 
 import numpy as np
 
 from procgen.chance.kernel import kernel
-from procgen.spec.declare import Parameter, Real, Reals, Record
-from procgen.terms.base import LAW, Ahead, Draw, Term, number, rows, signed, stated, without_gap
-from procgen.terms.garch import FORGOTTEN, INFINITE, OMEGA, SD
+from procgen.spec.declare import Parameter, Real
+from procgen.terms.base import LAW, Ahead, number, signed, without_gap
+from procgen.terms.conditional import (
+    BEFORE,
+    FORGOTTEN,
+    INFINITE,
+    OMEGA,
+    SD,
+    Conditional,
+    burn_without_variance,
+    left_from,
+)
 from procgen.terms.start import companion, decay_length
 
 
@@ -34,27 +42,11 @@ def variance(e, omega, alpha, gamma, beta, variances, h):
     return h
 
 
-BEFORE = Parameter(
-    "before",
-    "",
-    Record(
-        Parameter("variance", "h", Reals(above=0), "variances before step 0, oldest first", unit="series²"),
-        Parameter("shocks", "e", Reals(), "values before step 0, oldest first", unit="series"),
-    ),
-    "what came before step 0, to leave from a known variance instead of the stationary law",
-    default=None,
-)
-
-
-class GjrGarch(Term):
+class GjrGarch(Conditional):
     kind = "gjr_garch"
-    family = "volatility"
     purpose = "white shocks whose variance follows the square before, more so after a negative shock"
     source = "Glosten, Jagannathan & Runkle (1993); moments: He & Teräsvirta (1999)"
     example = "gjr_garch: {sd: 1.1, alpha: 0.03, gamma: 0.08, beta: 0.87}"
-    knows = "variance, kurtosis and autocorrelation of squares where they exist; uncorrelated, not independent"
-    noise = True
-    outputs = ("variance",)
     parameters: ClassVar[tuple[Parameter, ...]] = (
         OMEGA,
         SD,
@@ -106,47 +98,26 @@ class GjrGarch(Term):
         """Standard deviation, in the series' unit."""
         return float(np.sqrt(self.resting()))
 
-    def as_member(self):
-        """None: a past that follows the squares cannot be drawn with linear terms."""
-        return None
-
-    def draws(self):
-        return (Draw("innovation", self.law),)
-
-    def past(self):
-        return None if self.before is None else min(len(self.before["shocks"]), len(self.before["variance"]))
-
     def burn(self):
         """Steps until the variance has forgotten where it began, to 1e-12."""
-        if self.before is not None:
-            return 0
         persistence = self.alpha + self.beta + self.gamma * downside(self.law)
         if persistence < 1.0:
             return decay_length(companion((persistence,), (), 1, 0)[0])
-        # Without a variance: E c^s < 1 for some s < 1, as for a garch. No rounding of it moves a power of two.
-        factor = min(self.law.expect(lambda z, s=s: self._factor(z) ** s) for s in (0.05, 0.1, 0.25, 0.5, 0.75))
-        return 2 ** min(16, math.ceil(math.log2(math.log(1e-12) / math.log(factor))))
+        return burn_without_variance(self.law, self._factor)
 
     def _factor(self, z):
         return self.beta + (self.alpha + (self.gamma if z < 0 else 0.0)) * z * z
-
-    def reach(self, head):
-        return (max(self.burn(), head),)
 
     def first(self):
         """The variance at step 0 that follows from the given past."""
         h, e = self.before["variance"][-1], self.before["shocks"][-1]
         return self.level() + (self.alpha + (self.gamma if e < 0 else 0.0)) * (e * e) + self.beta * h
 
-    def begin(self, before):
-        if self.before is not None:
-            h, past = rows(self.before["variance"]), rows(self.before["shocks"])
-            values = {"": past[len(past) - before.head :], "variance": h[len(h) - before.head :]}
-            return values, {"h": np.full((1, 1), self.first())}
-        (count,) = self.reach(before.head)
-        z = before.inputs[0][len(before.inputs[0]) - count :]
-        values, state = self.recurse((z,), {"h": np.full((1, 1), self.resting())}, None)
-        return {name: rows[count - before.head :] for name, rows in values.items()}, state
+    def rest(self):
+        return {"h": np.full((1, 1), self.resting())}
+
+    def left(self):
+        return {"h": np.full((1, 1), self.first())}
 
     def _coefficients(self):
         return self.level(), self.alpha, self.gamma, self.beta
@@ -160,8 +131,7 @@ class GjrGarch(Term):
     def invert(self, values, known, state, at):
         values, gap = without_gap(values, self.scale())
         if state is None:
-            first = self.resting() if self.before is None else self.first()
-            state = {"h": np.full((1, 1), first), "skip": np.array([0])}
+            state = {**(self.rest() if self.before is None else self.left()), "skip": np.array([0])}
         h = np.empty_like(values)
         following = variance(values, *self._coefficients(), h, _row(state["h"], values))
         z = values / np.sqrt(h)
@@ -190,13 +160,6 @@ class GjrGarch(Term):
 
 
 _NAMED = "alpha + beta + gamma E z² I(z < 0)"
-
-
-def left_from(before):
-    """The variance and the shock just before step 0 where they are given, for the end of an equation."""
-    if before is None:
-        return ""
-    return f",  {stated('h', before['variance'][-1:])}, {stated('e', before['shocks'][-1:])}"
 
 
 def downside(law):

@@ -10,8 +10,8 @@ from procgen.chance.laws import Normal
 from procgen.chance.portable import exp, log
 from procgen.spec.declare import Parameter, Real
 from procgen.terms.base import LAW, Ahead, Draw, Term, Unknown, number, signed
+from procgen.terms.conditional import SD
 from procgen.terms.egarch import SCALE, log_recursion
-from procgen.terms.garch import SD
 from procgen.terms.start import companion, decay_length
 
 NORMAL = Normal()

@@ -192,7 +192,7 @@ class VectorArma(Term):
         return " ".join([*terms, f"+ a_{self.outputs[row]}[t]"])
 
     def _spreads(self):
-        sds = ", ".join(number(float(np.sqrt((row * row).sum()))) for row in self.loading)
+        sds = ", ".join(number(sd) for sd in (self.sd if len(self.sd) == self.k else self.sd * self.k))
         correlated = "correlated" if self.correlation else "independent"
         return f"sd a = ({sds}), {correlated}"
 

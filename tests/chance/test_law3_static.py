@@ -40,9 +40,10 @@ EXEMPT = {
 # Single functions: only whether a spec is accepted, or a length rounded to a power of two, depends on them.
 EXEMPT_PLACES = {
     ("terms/arma.py", "_root"),
-    ("terms/garch.py", "burn"),
+    ("terms/conditional.py", "burn_without_variance"),
     ("terms/garch.py", "_without_variance"),
-    ("terms/gjr.py", "burn"),
+    ("terms/vector.py", "eigenvalues"),
+    ("terms/vector.py", "shape_faults"),
     ("terms/gjr.py", "_without_variance"),
 }
 
