@@ -57,6 +57,19 @@ def test_errors_of_correlations_are_what_they_vary_by():
     assert np.mean([f.error for f in found], axis=0) == pytest.approx(actual, rel=0.3)
 
 
+def test_bands_hold_95_times_in_100():
+    # 300 samples: share within at least 0.95 − 6 sd = 0.875 for each of four bands, false-alarm probability below 1e-8.
+    rng, held, lags = np.random.default_rng(4), [], np.array([1, 4])
+    bartlett = seen.NORMAL * stated({"ar": {"phi": 0.5, "sd": 1}}, steps=300).bartlett(lags, 1)
+    for _ in range(300):
+        many = ar(0.5, 60, 60, rng)
+        found = seen.correlogram(seen.deviations(many, None), lags)
+        one = seen.correlogram(ar(0.5, 1, 300, rng), lags)
+        near = np.abs(found.value - 0.5**lags) <= seen.NORMAL * found.error
+        held.append([*near, *(np.abs(one.value - 0.5**lags) <= bartlett)])
+    assert np.min(np.mean(held, axis=0)) >= 0.875 and np.max(np.mean(held, axis=0)) <= 0.995
+
+
 def test_missing_values_are_left_out():
     x = ar(0.6, 40, 80)
     holes = x.copy()

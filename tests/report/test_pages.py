@@ -13,7 +13,7 @@ from procgen.checks.verdict import Check, Verdict
 from procgen.report.html import verdict_page, whole_page
 from procgen.report.pictures.gallery import of_data, of_spec_alone
 from procgen.report.pictures.safe import escaped, visible
-from procgen.report.pictures.sample import of_ensemble, of_spec
+from procgen.report.pictures.sample import of_ensemble, of_spec, of_table
 from procgen.report.pictures.svg import poster
 from tests.report.pages import drawing, ensemble, self_contained
 
@@ -147,19 +147,28 @@ def test_many_paths_make_no_longer_a_page():
 # what is read, and what is said of it
 
 
-def test_a_sample_is_the_first_paths_and_says_so(tmp_path):
-    found = ensemble({"x": AR, "y": GARCH}, paths=40, steps=50)
+def test_a_sample_is_spread_over_all_paths_and_says_so(tmp_path):
+    found = ensemble({"x": AR, "y": GARCH}, paths=90, steps=50)
     stored = pg.render(found.spec, out=tmp_path / "e", workers=1)
-    for each in (found, stored, found.paths(10, 40)):
-        some = of_ensemble(each, limit=2 * 50 * 7 + 3)
-        assert some.paths == 7 and some.steps == 50
-        first = some.first_path
-        assert np.array_equal(some.values["y"], found["y"][first : first + 7])
-        assert some.says == f"the first 7 paths of {each.whole.paths}"
+    for each in (found, stored, found.paths(20, 90)):
+        some = of_ensemble(each, limit=2 * 50 * 19 + 3)
+        first, last = each.whole.first_path, each.whole.end_path - 1
+        rows = [np.flatnonzero((found["y"] == row).all(axis=1)).item() for row in some.values["y"]]
+        assert len(rows) == 19 and rows == sorted(set(rows)) and (rows[0], rows[-1]) == (first, last)
+        assert np.array_equal(some.values["x"], found["x"][rows])
+        assert np.diff(rows).max() <= 2 * len(found["x"]) / 8
+        assert some.says == f"19 of {each.whole.paths} paths, from stretches that are spread over all of them"
     short = of_ensemble(stored, limit=40)
     assert np.array_equal(short.values["x"], found["x"][:1, :20])
-    assert short.says == "the first 1 path of 40, the first 20 of 50 steps"
-    assert of_ensemble(found).says == "all 40 paths"
+    assert short.says.endswith(", the first 20 of 50 steps")
+    assert of_ensemble(found).says == "all 90 paths"
+
+
+def test_a_table_is_sampled_as_an_ensemble_is():
+    found = ensemble({"x": AR, "y": GARCH}, paths=90, steps=50)
+    table = pg.validate(found.to_pandas(), found.spec).origin
+    same = of_ensemble(found, limit=5000)
+    assert np.array_equal(of_table(table, limit=5000).values["y"], same.values["y"])
 
 
 def test_a_spec_alone_shows_paths_that_it_would_have():

@@ -15,7 +15,9 @@ LIMIT = 1 << 24  # values of all series together that are held: 134 MB
 DRAWN_LIMIT = 1 << 21  # the same for paths that are drawn for a picture only
 DRAWN_PATHS = 200
 STRIP = 400  # steps of a path's parts that are shown
+STRETCHES = 8  # of neighbouring paths, spread over an ensemble that is too large to be held
 
+Stretch = tuple[int, int]  # first path, number of paths
 Blocks = Iterable[tuple[int, int, Mapping[str, NDArray]]]
 
 
@@ -26,7 +28,7 @@ class Sample:
     Attributes
     ----------
     spec : the spec that the values should follow
-    values : series -> (paths, steps), NaN where a value is missing; the first paths, and the first steps, of all
+    values : series -> (paths, steps), NaN where a value is missing; some of all paths, the first ones of all steps
     parts : revealed term or output -> its first STRIP steps on the first path
     first_path : number of the first path
     all_paths, all_steps : how many there are
@@ -57,7 +59,7 @@ class Sample:
         if self.drawn:
             what = f"{many(self.paths, 'path')} drawn for this picture, of the {self.all_paths:,} of the spec"
         elif self.paths < self.all_paths:
-            what = f"the first {many(self.paths, 'path')} of {self.all_paths:,}"
+            what = f"{self.paths:,} of {self.all_paths:,} paths, from stretches that are spread over all of them"
         else:
             what = "the only path" if self.paths == 1 else f"all {self.paths:,} paths"
         some = f", the first {self.steps:,} of {self.all_steps:,} steps" if self.steps < self.all_steps else ""
@@ -65,25 +67,26 @@ class Sample:
 
 
 def of_ensemble(ensemble: Any, limit: int = LIMIT) -> Sample:
-    """The first paths of an ensemble; those that cannot be read are left out, and it is said."""
+    """Some paths of an ensemble; those that cannot be read are left out, and it is said."""
     spec, whole = ensemble.spec, ensemble.whole
     names = list(spec.series)
     paths, steps = _share(whole.paths, whole.steps, limit // len(names))
     first = whole.first_path
-    values, note = _filled(_stored(ensemble, first, first + paths, names), names, (first, paths), steps)
+    chosen = _stretches(first, whole.paths, paths)
+    values, note = _filled(_stored(ensemble, chosen, names), names, chosen, steps)
     parts = [name for name in ensemble.names if name not in spec.series]
     strips: dict[str, NDArray] = {}
     if parts:
-        found, _ = _filled(_stored(ensemble, first, first + 1, parts), parts, (first, 1), min(steps, STRIP))
+        found, _ = _filled(_stored(ensemble, [(first, 1)], parts), parts, [(first, 1)], min(steps, STRIP))
         strips = {name: rows[0] for name, rows in found.items()}
     return Sample(spec, values, whole.paths, whole.steps, first, strips, note=note)
 
 
 def of_table(table: Any, limit: int = LIMIT) -> Sample:
-    """The first paths of anyone's table that was read for `validate`."""
+    """Some paths of anyone's table that was read for `validate`."""
     names = list(table.spec.series)
     paths, steps = _share(table.paths, table.steps, limit // len(names))
-    values, note = _filled(table.blocks(), names, (0, paths), steps)
+    values, note = _filled(table.blocks(), names, _stretches(0, table.paths, paths), steps)
     return Sample(table.spec, values, table.paths, table.steps, note=note)
 
 
@@ -110,32 +113,49 @@ def _share(paths: int, steps: int, limit: int) -> tuple[int, int]:
     return min(paths, max(1, limit // steps)), min(steps, max(1, limit))
 
 
-def _stored(ensemble: Any, first: int, end: int, names: Sequence[str]) -> Blocks:
-    for block, values in ensemble.stored(first, end, names):
-        yield block.first_path, block.first_step, values
+def _stretches(first: int, paths: int, wanted: int) -> list[Stretch]:
+    """Which paths are taken: all, or as many as are wanted in stretches from the first path to the last."""
+    if wanted >= paths:
+        return [(first, paths)]
+    count = min(STRETCHES, wanted)
+    sizes = [wanted * (k + 1) // count - wanted * k // count for k in range(count)]
+    room = paths - wanted
+    begins = [first + sum(sizes[:k]) + (room * k // (count - 1) if count > 1 else 0) for k in range(count)]
+    return list(zip(begins, sizes, strict=True))
 
 
-def _filled(blocks: Blocks, names: Sequence[str], paths: tuple[int, int], steps: int) -> tuple[dict[str, NDArray], str]:
-    """Arrays (paths, steps) from blocks, which may reach beyond, and a note where they end early."""
-    first, count = paths
+def _stored(ensemble: Any, stretches: Sequence[Stretch], names: Sequence[str]) -> Blocks:
+    for first, count in stretches:
+        for block, values in ensemble.stored(first, first + count, names):
+            yield block.first_path, block.first_step, values
+
+
+def _filled(
+    blocks: Blocks, names: Sequence[str], stretches: Sequence[Stretch], steps: int
+) -> tuple[dict[str, NDArray], str]:
+    """Arrays (paths, steps) of the stretches, one behind the other, and a note where blocks end early.
+
+    Blocks may reach beyond, and come again for another stretch.
+    """
+    count = sum(size for _, size in stretches)
     out = {name: np.full((count, steps), np.nan) for name in names}
-    left, note = count * steps, ""
+    filled, note = np.zeros(count, np.int64), ""
     try:
         for first_path, first_step, values in blocks:
-            some = values[names[0]]
-            a, b = max(first_path, first), min(first_path + some.shape[0], first + count)
-            t = min(first_step + some.shape[1], steps)
-            if a >= b or first_step >= t:
-                continue
-            for name in names:
-                rows = values[name][a - first_path : b - first_path, : t - first_step]
-                out[name][a - first : b - first, first_step:t] = rows
-            left -= (b - a) * (t - first_step)
-            if left <= 0:
+            end_path, end_step = first_path + len(values[names[0]]), first_step + values[names[0]].shape[1]
+            t, row = min(end_step, steps), 0
+            for first, size in stretches:
+                a, b = max(first_path, first), min(end_path, first + size)
+                if a < b and first_step < t:
+                    to = slice(row + a - first, row + b - first)
+                    for name in names:
+                        out[name][to, first_step:t] = values[name][a - first_path : b - first_path, : t - first_step]
+                    filled[to] = np.maximum(filled[to], t)
+                row += size
+            if (filled == steps).all():
                 break
     except ValueError as error:  # a part is damaged; the verdict says so too
         note = f"the rest cannot be read: {error}"
-    if note:
-        read = max(1, int(np.isfinite(out[names[0]]).any(axis=1).sum()))
-        out = {name: values[:read] for name, values in out.items()}
+        kept = filled > 0 if filled.any() else np.arange(count) == 0
+        out = {name: values[kept] for name, values in out.items()}
     return out, note
