@@ -19,6 +19,7 @@ from tests.theory.specs import series_of, theory_of
 
 H = np.array([1, 2, 3, 5, 8, 13, 30])
 PARTIALS = st.lists(st.floats(-0.9, 0.9).map(lambda r: round(r, 3)), min_size=1, max_size=4)
+NUMBERS = st.floats(-1, 1).map(lambda x: round(x, 2))
 SOME = settings(max_examples=15, deadline=None)
 
 
@@ -91,6 +92,46 @@ def test_two_correlated_autoregressions_and_noise_by_the_riccati_equation(a, b, 
         expected.append(float((seen @ p @ seen.T)[0, 0]) + 1.0)
         p = move @ p @ move.T + shocks
     np.testing.assert_allclose(x.forecast_variance(range(1, 7)), expected, rtol=1e-9)
+
+
+SPREADS = st.sampled_from([0.5, 1, 2])
+PARTS = st.one_of(
+    st.builds(lambda r, sd: {"ar": {"phi": list(coefficients(r)), "sd": sd}}, PARTIALS, SPREADS),
+    st.builds(
+        lambda r, q, sd: {"arma": {"phi": list(coefficients(r)), "theta": [q, 3 * q], "sd": sd}},
+        PARTIALS, NUMBERS, SPREADS,
+    ),
+    st.builds(lambda sd: {"white_noise": {"sd": sd}}, SPREADS),
+    st.builds(lambda sd: {"random_walk": {"sd": sd}}, SPREADS),
+    st.builds(lambda sd: {"seasonal_random_walk": {"period": 3, "sd": sd, "form": "dummy"}}, SPREADS),
+    st.builds(lambda sd: {"local_linear_trend": {"level_sd": sd, "slope_sd": 0.3, "noise_sd": sd}}, SPREADS),
+)  # fmt: skip
+BESIDE = [
+    lambda parts: parts,
+    lambda parts: [*parts, {"lag": {"of": [{"use": "z"}], "by": 2}}],
+    lambda parts: [{"difference": parts}, {"use": "z", "times": 0.5}],
+    lambda parts: [*parts, {"use": "z"}, {"lag": {"of": [{"use": "z"}], "by": 1}, "times": -0.7}],
+    lambda parts: [{"integrate": parts[:1]}, {"use": "z"}],
+]
+
+
+@settings(max_examples=30, deadline=None)
+@given(st.lists(PARTS, min_size=1, max_size=3), st.sampled_from(BESIDE))
+def test_any_sum_by_a_kalman_filter_run_from_step_0(parts, beside):
+    """Prediction variances of 600 steps (Kalman 1960), where they have settled: unit roots, delays, shared noises."""
+    body = beside([{**part, "as": f"n{i}"} for i, part in enumerate(parts)])
+    x = series_of(*body, shared={"z": [{"ar": {"phi": 0.6, "sd": 1}}]})
+    system = x.system()
+    move, seen, p = system.transition, system.observation[0], system.initial
+    shocks, errors = system.loading @ system.noise @ system.loading.T, []
+    for _ in range(600):
+        reached = p @ seen
+        errors.append(float(seen @ reached))
+        if errors[-1] > 1e-13 * np.abs(p).max():
+            p = p - np.outer(reached, reached) / errors[-1]
+        p = move @ p @ move.T + shocks
+    if abs(errors[-1] - errors[-60]) <= 1e-9 * errors[-1]:  # else a root on the unit circle is learnt like 1/t
+        assert float(x.forecast_variance([1])[0]) == pytest.approx(errors[-1], rel=1e-6)
 
 
 LINEAR = [
