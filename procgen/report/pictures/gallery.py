@@ -38,7 +38,9 @@ class Gallery:
 
     @property
     def title(self) -> str:
-        return self.sample.spec.title or ", ".join(self.sample.spec.series)
+        names = list(self.sample.spec.series)
+        more = f" and {len(names) - 4} more series" if len(names) > 4 else ""
+        return self.sample.spec.title or ", ".join(names[:4]) + more
 
     @property
     def groups(self) -> list[tuple[str, Sequence[Chart]]]:

@@ -70,7 +70,7 @@ def _drawn(axes: Any, heading: str, chart: Chart) -> None:
     label = f"{chart.x.label}\n" if chart.x.label else ""
     axes.set_xlabel(_plain(label + fill(chart.caption, 92)), fontsize=7.5, loc="left", color=LIGHT["soft"])
     if chart.key:
-        axes.legend(fontsize=7, frameon=False, loc="best")
+        axes.legend(fontsize=7, framealpha=0.85, edgecolor="none", loc="best")
 
 
 def _mark(axes: Any, mark: Mark) -> None:
