@@ -198,6 +198,10 @@ class BetaDraw(DrawLaw):
     def closed(self) -> bool:
         return False
 
+    def trials(self) -> tuple[float, ...]:
+        margin = 1e-9 * (self.high - self.low)
+        return (self.low + margin, self.high - margin)
+
     @property
     def ends(self) -> tuple[float, float]:
         return self.between

@@ -112,6 +112,9 @@ def _members(
     if not tree.is_map or "of" not in tree.value:
         reader.expected(tree, "a mapping with `of`, and `names` or a `table`")
         return ()
+    if "stream" in tree.value:
+        reader.fault(tree.key("stream"), "the series of a group draw by their names; remove stream")
+        return ()
     names, table = (p.read(tree.value[p.name], reader) if p.name in tree.value else None for p in TEMPLATE[:2])
     if INVALID in (names, table) or not _told(names, table, tree, reader):
         return ()
