@@ -45,6 +45,11 @@ class Source:
         return self.detail.gaussian if self.kind == PROCESS else self.kind == IID and bool(self.law.gaussian)
 
     @property
+    def called(self) -> str:
+        """What people know it as: the term that it belongs to."""
+        return self.detail.name if self.kind == PROCESS else (self.owner or self).key
+
+    @property
     def power_tailed(self) -> bool:
         """Whether its tails are known to be power laws."""
         if self.kind in (GARCH, SQUARES):

@@ -178,5 +178,4 @@ def _refuse_uncentred(sources) -> None:
 
 
 def _names(group: Sequence[Source]) -> str:
-    shown = [source.owner.key if source.owner else source.key for source in group if not source.gaussian]
-    return ", ".join(dict.fromkeys(shown))
+    return ", ".join(dict.fromkeys(source.called for source in group if not source.gaussian))
