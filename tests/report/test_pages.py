@@ -182,7 +182,7 @@ def test_a_spec_alone_shows_paths_that_it_would_have():
 
 def test_a_damaged_part_leaves_a_page(tmp_path):
     out = tmp_path / "e"
-    pg.render(ensemble({"x": AR}, paths=60).spec, out=out, workers=1)
+    pg.render(ensemble({"x": AR}, paths=60).spec, out=out, workers=1, reveal="all")
     (part,) = out.glob("*.parquet")
     data = bytearray(part.read_bytes())
     data[: len(data) // 2] = bytes(len(data) // 2)
@@ -191,6 +191,23 @@ def test_a_damaged_part_leaves_a_page(tmp_path):
     assert verdict.agrees is not True
     page = self_contained(verdict_page(verdict))
     assert "cannot be read" in " ".join(page.text)
+
+
+def test_an_ensemble_is_shown_against_the_spec_that_it_was_held_against():
+    found = ensemble({"x": AR, "y": GARCH}, paths=60, reveal="all")
+    other = pg.load({**found.spec.raw, "series": {"x": [{"constant": 9}, {"ar": {"phi": 0.5, "sd": 1}}], "y": GARCH}})
+    page = self_contained(verdict_page(pg.validate(found, other)))
+    said = " ".join(page.text)
+    assert "x[t] = 9" in said and "x[t] = 5" not in said
+    assert other.digest() in said and found.spec.digest() not in said
+    assert page.seen.count("nav") == 0 and "x__ar" not in "".join(page.ids)  # a revealed term is no series
+
+
+def test_a_path_that_leaves_the_frame_is_said_to():
+    found = ensemble({"x": [{"white_noise": {"sd": 1, "law": {"student_t": {"df": 2.1}}}}]}, paths=60, steps=300)
+    first = of_data(found).sections[0].charts[0]
+    assert first.caption.endswith(" Paths leave the frame.") == (np.abs(found["x"][:4]).max() > first.y.high)
+    assert first.caption.endswith(" Paths leave the frame.")
 
 
 def test_values_that_are_missing_leave_gaps():

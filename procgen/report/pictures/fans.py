@@ -50,8 +50,8 @@ def fan(subject: Subject, steps: int, title: str) -> Chart:
     if seen is not None:
         for level, row in zip((0, 2, 4), seen[[0, 2, 4]], strict=True):
             marks.append(Line(at, row, "seen", "seen 5, 50, 95 %" if level == 0 else ""))
-    caption = _caption(subject, stated, kind, values)
     y = _range(stated, seen, shown)
+    caption = _caption(subject, stated, kind, values) + _beyond(y, shown)
     x = step_axis(subject.grid, 0, steps - 1)
     return Chart(title, caption, x, y, marks, *_numbers(at, stated, seen, shown))
 
@@ -83,14 +83,13 @@ def overview(subject: Subject) -> Chart:
         f"All {subject.steps:,} steps; a point gathers {each} of them, for which bands are shown at their widest and "
         "paths from their lowest to their highest value."
     )
+    y = _range(stated, seen, shown)
     pick = some(BUCKETS, 12)
     head, rows = _numbers(
         edges[:-1][pick], None if stated is None else stated[:, pick], None if seen is None else seen[:, pick], None
     )
-    y = _range(stated, seen, shown)
-    return Chart(
-        f"Paths of {subject.called}", caption, step_axis(subject.grid, 0, subject.steps - 1), y, marks, head, rows
-    )
+    x = step_axis(subject.grid, 0, subject.steps - 1)
+    return Chart(f"Paths of {subject.called}", caption + _beyond(y, shown), x, y, marks, head, rows)
 
 
 def strips(sample: Sample) -> Chart | None:
@@ -98,7 +97,7 @@ def strips(sample: Sample) -> Chart | None:
 
     None where nothing was revealed that moves.
     """
-    moving = {name: row for name, row in sample.parts.items() if float(np.ptp(row[np.isfinite(row)])) > 0.0}
+    moving = {name: row for name, row in sample.parts.items() if len(np.unique(row[np.isfinite(row)])) > 1}
     names = list(moving)[:MOST_PARTS]
     if not names:
         return None
@@ -206,6 +205,12 @@ def _range(stated: NDArray | None, seen: NDArray | None, shown: NDArray) -> Axis
         low = min(float(b.min()), max(low, float(b.min()) - size))
         high = max(float(b.max()), min(high, float(b.max()) + size))
     return axis(low, high, most=5, room=0.03)
+
+
+def _beyond(y: Axis, shown: NDArray) -> str:
+    """A sentence where a path that is drawn leaves the frame."""
+    paths = shown[np.isfinite(shown)]
+    return " Paths leave the frame." if len(paths) and (paths.min() < y.low or paths.max() > y.high) else ""
 
 
 def _widest(rows: NDArray, shape: tuple[int, ...]) -> NDArray:

@@ -66,9 +66,12 @@ class Sample:
         return what + some + (f"; {self.note}" if self.note else "")
 
 
-def of_ensemble(ensemble: Any, limit: int = LIMIT) -> Sample:
-    """Some paths of an ensemble; those that cannot be read are left out, and it is said."""
-    spec, whole = ensemble.spec, ensemble.whole
+def of_ensemble(ensemble: Any, limit: int = LIMIT, spec: Any = None) -> Sample:
+    """Some paths of an ensemble, to be held against its own spec or another one.
+
+    Paths that cannot be read are left out, and it is said.
+    """
+    spec, whole = spec or ensemble.spec, ensemble.whole
     names = list(spec.series)
     paths, steps = _share(whole.paths, whole.steps, limit // len(names))
     first = whole.first_path
@@ -105,7 +108,17 @@ def of_spec(spec: Any, limit: int = DRAWN_LIMIT) -> Sample:
 def of_origin(origin: Any) -> Sample:
     """The sample behind what `validate` has read."""
     ensemble = getattr(origin, "ensemble", None)
-    return of_table(origin) if ensemble is None else of_ensemble(ensemble)
+    return of_table(origin) if ensemble is None else of_ensemble(ensemble, spec=_asked(origin))
+
+
+def _asked(origin: Any) -> Any:
+    """The spec that an ensemble was held against, without the series that stand for revealed terms."""
+    from procgen.ensemble.source import read_spec
+
+    own = [name for name, column in origin.columns.items() if name == column]
+    if len(own) == len(origin.spec.series):
+        return origin.spec
+    return read_spec({**origin.spec.raw, "series": {name: origin.spec.raw["series"][name] for name in own}})
 
 
 def _share(paths: int, steps: int, limit: int) -> tuple[int, int]:
