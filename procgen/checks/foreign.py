@@ -73,7 +73,8 @@ class Names:
                 )
         self.found, self.where = found, where
         self.path = self._pick("path", given, False)
-        self.step = self._pick("step", given, False)
+        timed = "time" in given and "step" not in given  # a column that is named goes before one that is only there
+        self.step = None if timed else self._pick("step", given, False)
         self.time = None if self.step else self._pick("time", given, False)
         self.series = {name: self._pick(name, given, True) for name in spec.series}
         self.all = [c for c in (self.path, self.step, self.time, *self.series.values()) if c is not None]
@@ -89,8 +90,15 @@ class Names:
             raise TableError(
                 f"{self.where} has no column {name!r} for {role}; its columns are {', '.join(self.found)}"
                 + (f" ({hint})" if hint else "")
+                + f"; {_option(role)}"
             )
         return None
+
+
+def _option(role: str) -> str:
+    """How to say which column is what."""
+    option = f"--{role}-col NAME" if role in ("path", "step", "time") else f"--series-col {role}=NAME"
+    return f'name the right one with {option} (columns={{"{role}": NAME}})'
 
 
 class Table:
@@ -112,13 +120,13 @@ class Table:
         if self.paths * self.steps > 4 * len(frame) + 1_000_000:
             raise TableError(
                 f"{where}: {len(frame)} rows cannot be {self.paths} paths of {self.steps} steps; "
-                "is the right column named for the step?"
+                f"is the right column taken for the step? {_option('step')}"
             )
         self.rows = self.paths * self.steps
         if names.path is None and len(np.unique(step)) < len(step):
             raise TableError(
                 f"{where}: steps repeat, and there is no column path; columns are {', '.join(map(str, names.found))}; "
-                'name it with --path-col NAME (columns={"path": NAME})'
+                f"{_option('path')}"
             )
         self._place(path, step)
         self._values = {name: self._numbers(frame[column], name) for name, column in names.series.items()}
@@ -172,7 +180,10 @@ class Table:
         bad = ~np.isfinite(numbers) | (numbers != np.rint(numbers)) | (np.abs(numbers) > 2**53)
         if bad.any():
             row = int(np.argmax(bad))
-            raise TableError(f"{self.where}: expected whole steps in {name}, got {_cell(column, row)} in row {row}")
+            raise TableError(
+                f"{self.where}: expected whole steps in {name}, got {_cell(column, row)} in row {row}; name another "
+                "column with --step-col NAME, or one of times with --time-col NAME"
+            )
         step = numbers.astype(np.int64)
         lowest = int(step.min())
         if lowest == 1 and int(step.max()) == self.spec.time.steps:
@@ -191,7 +202,10 @@ class Table:
             times = pd.to_datetime(column, errors="coerce", utc=True, format="mixed")
         if times.isna().any():
             row = int(np.argmax(times.isna().to_numpy()))
-            raise TableError(f"{self.where}: {_cell(column, row)} in row {row} of {name} is no time")
+            raise TableError(
+                f"{self.where}: {_cell(column, row)} in row {row} of {name} is no time; {_option('time')}, or one of "
+                "whole steps with --step-col NAME"
+            )
         naive = times.dt.tz is None
         utc = times.dt.tz_localize("UTC") if naive else times.dt.tz_convert("UTC")
         stamps = utc.dt.tz_localize(None).to_numpy().astype("datetime64[us]").astype(np.int64)

@@ -115,14 +115,13 @@ def grain_of(declared: Any, theory: Any, steps: int) -> float:
     """
     if theory.discrete:
         return 0.0
-    if declared.decimals is not None or declared.type == "int64":
-        return 10.0 ** -(declared.decimals or 0)
-    if declared.type == "float32":
+    grain = 10.0 ** -(declared.decimals or 0) if declared.decimals is not None or declared.type == "int64" else 0.0
+    if declared.type == "float32":  # far from 0 its spacing is wider than the decimals
         at = np.array([0, steps // 2, steps - 1])
         mean, variance = theory.mean(at), theory.variance(at)
         reach = np.abs(mean if mean is not None else 1.0) + 3 * np.sqrt(variance if variance is not None else 1.0)
-        return float(np.spacing(np.float32(np.max(reach))))
-    return 0.0
+        grain = max(grain, float(np.spacing(np.float32(np.max(reach)))))
+    return grain
 
 
 def _periods(graph: Any, name: str) -> list[int]:

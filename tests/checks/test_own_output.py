@@ -134,3 +134,12 @@ def test_scores_of_a_bounded_law_are_exact_up_to_its_ends():
     assert 4 < scores.normal_scores(beyond)[0] < 8
     assert scores.normal_scores(beyond)[1] == pytest.approx(scores.normal_scores(beyond)[2])  # mirrored
     assert scores.outside(beyond) == 1  # rounding put the first there, nothing of this law the second
+
+
+def test_float32_far_from_zero_is_coarser_than_its_decimals():
+    # At ten million float32 holds whole numbers alone (NumPy's spacing), which the two decimals do not tell.
+    x = {"type": "float32", "decimals": 2, "of": [{"constant": 1e7}, {"white_noise": {"sd": 1.5}}]}
+    spec = read_spec({"procgen": 1, "seed": 3, "paths": 1000, "time": {"steps": 100}, "series": {"x": x}})
+    assert np.spacing(np.float32(1e7)) == 1
+    verdict = validate(render(spec), false_alarm=FALSE_ALARM)
+    assert verdict.agrees is True, verdict.headline
