@@ -3,14 +3,27 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping, Sequence
-from typing import Any, ClassVar
+from typing import Any, ClassVar, NamedTuple
 
 import numpy as np
 
 from procgen.chance.kernel import kernel
 from procgen.chance.laws import LAWS
-from procgen.spec.declare import Parameter, Reals, Span, Text
+from procgen.spec.declare import (
+    INVALID,
+    Domain,
+    Parameter,
+    Reading,
+    Reals,
+    Schema,
+    Span,
+    Text,
+    Whole,
+    mapping_of,
+    read_parameters,
+)
 from procgen.spec.named import Named, Names, Rows
+from procgen.spec.tree import Tree
 from procgen.terms.base import Ahead, Array, Draw, Issue, State, Term, number
 
 UNIFORM = LAWS["uniform"]()
@@ -20,10 +33,42 @@ STATIONARY = "stationary"
 MOST_STATES = 20
 ROW_ERROR = 1e-9
 
+class Stay(NamedTuple):
+    """Time spent in a state at a go: its mean in steps, and how many memoryless stages it is made of."""
+
+    mean: float
+    stages: int = 1
+
+
+class Stays(Domain):
+    """A mean length of time, or one with a number of stages; read as a Stay."""
+
+    structured = True
+    parts = (
+        Parameter("mean", "ℓ", Span(), "mean time spent in the state at a go", unit="steps"),
+        Parameter(
+            "stages", "k", Whole(at_least=1, at_most=MOST_STATES), "how many stages, alike and one after the other"
+        ),
+    )
+
+    def describe(self) -> str:
+        return "a length of time, or {mean: 12, stages: 4}: more stages vary less, as many as the mean not at all"
+
+    def read(self, tree: Tree, reader: Reading) -> Any:
+        if not tree.is_map:
+            mean = Span().read(tree, reader)
+            return INVALID if mean is INVALID else Stay(mean)
+        values = read_parameters(tree, self.parts, reader)
+        return INVALID if values is INVALID else Stay(values["mean"], values["stages"])
+
+    def schema(self) -> Schema:
+        return {"anyOf": [Span().schema(), mapping_of(self.parts)]}
+
+
 DURATIONS = Parameter(
     "durations",
     "ℓ",
-    Named(Span()),
+    Named(Stays()),
     "mean time spent in each state at a go; what comes after it is any other state alike",
     default=None,
     unit="steps",
@@ -78,9 +123,16 @@ def check(values: Mapping[str, Any], names: Sequence[str], where: str) -> Iterab
 def _durations(durations: Mapping[str, float], names: Sequence[str]) -> Iterable[Issue]:
     if set(durations) != set(names):
         yield "durations", f"expected one for each of {', '.join(names)}, got {', '.join(durations)}"
-    for name, steps in durations.items():
-        if steps < 1.0:
-            yield "durations", f"expected at least 1 step for {name}, got {number(steps)}; a state lasts a step or more"
+    for name, stay in durations.items():
+        if stay.mean < 1.0:
+            what = f"expected at least 1 step for {name}, got {number(stay.mean)}"
+            yield "durations", f"{what}; a state lasts a step or more"
+        elif stay.mean < stay.stages:
+            what = f"expected a mean of at least {stay.stages} steps for {name}, got {number(stay.mean)}"
+            yield "durations", f"{what}; each stage lasts a step or more"
+    total = sum(stay.stages for stay in durations.values())
+    if total > MOST_STATES:
+        yield "durations", f"expected at most {MOST_STATES} stages in all, got {total}"
 
 
 def _rows(rows: Sequence[Sequence[float]], names: Sequence[str]) -> Iterable[Issue]:
@@ -96,16 +148,28 @@ def _rows(rows: Sequence[Sequence[float]], names: Sequence[str]) -> Iterable[Iss
             yield "transitions", f"expected the row of {name} to add up to 1, got {number(added(row))}"
 
 
+def owners(values: Mapping[str, Any], names: Sequence[str]) -> tuple[int, ...]:
+    """The state that each stage belongs to, in order; a state without stages is one of its own."""
+    if values["transitions"] is not None:
+        return tuple(range(len(names)))
+    return tuple(i for i, name in enumerate(names) for _ in range(values["durations"][name].stages))
+
+
 def matrix(values: Mapping[str, Any], names: Sequence[str]) -> Array:
-    """Transition probabilities, (states, states); the last column is what is left of 1."""
-    p = np.zeros((len(names), len(names)))
-    for i, name in enumerate(names):
+    """Transition probabilities, (stages, stages); the last column is what is left of 1."""
+    of = owners(values, names)
+    p, first = np.zeros((len(of), len(of))), [of.index(i) for i in range(len(names))]
+    for k, i in enumerate(of):
         if values["transitions"] is not None:
-            p[i] = values["transitions"][i]
+            p[k] = values["transitions"][i]
             continue
-        leave = 1.0 / values["durations"][name]
-        p[i] = leave / (len(names) - 1)
-        p[i, i] = 1.0 - leave
+        stay = values["durations"][names[i]]
+        leave = stay.stages / stay.mean
+        if k + 1 < len(of) and of[k + 1] == i:
+            p[k, k + 1] = leave
+        else:
+            p[k, [first[j] for j in range(len(names)) if j != i]] = leave / (len(names) - 1)
+        p[k, k] = 1.0 - leave
     p[:, -1] = np.maximum(1.0 - _cumulated(p)[:, -1], 0.0)
     return p
 
@@ -172,20 +236,37 @@ def backwards(p: Array, shares: Array) -> Array:
 
 
 class States:
-    """A chain as value code and theory need it: names, transition matrix, shares, and the state at step 0 if given."""
+    """A chain as value code and theory need it: names, transition matrix, shares, and the state at step 0 if given.
+
+    Where stays have stages the chain moves between these (Cox 1955): `owners` are the states they belong to.
+    """
 
     def __init__(self, values: Mapping[str, Any], names: Sequence[str]):
-        self.names = tuple(names)
+        self.names, self.owners = tuple(names), owners(values, names)
         self.p = matrix(values, names)
         self.shares = occupancy(self.p)
-        self.start = None if values["start"] == STATIONARY else names.index(values["start"])
+        self.start = None if values["start"] == STATIONARY else self.owners.index(list(names).index(values["start"]))
+
+    @property
+    def theory(self) -> tuple[Any, ...]:
+        """What the axis asks of a chain: transitions, shares, start, names and owners."""
+        return self.p, self.shares, self.start, self.names, self.owners
+
+    def whole(self, stages: Any) -> list[Any]:
+        """Numbers or rows, one a stage, added up by state."""
+        return [added([x for x, i in zip(stages, self.owners, strict=True) if i == k]) for k in range(len(self.names))]
+
+    def _seen(self, stages: Array) -> Array:
+        if len(self.owners) == len(self.names):
+            return stages
+        return np.take(np.array(self.owners, np.float64), stages.astype(np.int64))
 
     def _rest(self) -> Array:
         assert self.shares is not None  # `check` refuses a stationary start without them
         return self.shares
 
     def first(self, z: Array) -> Array:
-        """The states at step 0, (paths,), from the standardised uniforms of that step."""
+        """The stages at step 0, (paths,), from the standardised uniforms of that step."""
         if self.start is not None:
             return np.full(z.shape, float(self.start))
         out = np.empty((1, len(z)))
@@ -193,11 +274,11 @@ class States:
         return move(z[None, :], row, len(self.p) - 1, np.zeros(len(z)), out)
 
     def before(self, z: Array, s: Array) -> Array:
-        """The states at steps −n .. −1, from the uniforms at these steps and the states at step 0."""
+        """The states at steps −n .. −1, from the uniforms at these steps and the stages at step 0."""
         out = np.empty_like(z)
         if len(z):
             move(z[::-1].copy(), thresholds(backwards(self.p, self._rest())), len(self.p) - 1, s, out)
-        return out[::-1].copy()
+        return self._seen(out[::-1].copy())
 
     def go(self, z: Array, state: State) -> tuple[Array, State]:
         """The states of the next steps, (steps, paths), and the last of them as a carried state."""
@@ -208,7 +289,7 @@ class States:
             out[0] = s
         if len(z) > done:
             s = move(z[done:], thresholds(self.p), len(self.p) - 1, s, out[done:])
-        return out, state if s is None else {"s": s[None, :]}
+        return self._seen(out), state if s is None else {"s": s[None, :]}
 
     def chances(self, steps: int, state: State) -> Array:
         """Chances of each state at the coming steps, (states, steps, paths)."""
@@ -220,19 +301,25 @@ class States:
         for h in range(steps):
             if h or "s" in state:
                 now = np.stack([added([row * p for row, p in zip(now, column, strict=True)]) for column in self.p.T])
-            rows.append(now)
+            rows.append(np.stack(self.whole(now)))
         return np.stack(rows, axis=1)
 
     def says(self) -> str:
         """Transitions, shares and mean durations in words."""
-        rows = "; ".join(" ".join(number(round(x, 12)) for x in row) for row in self.p)
-        leave = [1.0 - self.p[i, i] for i in range(len(self.p))]
-        stays = [(name, 1.0 / p if p else np.inf) for name, p in zip(self.names, leave, strict=True)]
-        text = f"P = [{rows}]"
+        parts = []
+        if len(self.owners) == len(self.names):
+            rows = "; ".join(" ".join(number(round(x, 12)) for x in row) for row in self.p)
+            parts.append(f"P = [{rows}]")
         if self.shares is not None:
-            shares = zip(self.names, self.shares, strict=True)
-            text += f",  shares {', '.join(f'{name} {number(share)}' for name, share in shares)}"
-        return f"{text},  mean stays {', '.join(f'{name} {number(steps)}' for name, steps in stays)}"
+            shares = zip(self.names, self.whole(self.shares), strict=True)
+            parts.append(f"shares {', '.join(f'{name} {number(share)}' for name, share in shares)}")
+        with np.errstate(divide="ignore"):
+            means = self.whole(1.0 / (1.0 - np.diagonal(self.p)))
+        stays = []
+        for k, (name, mean) in enumerate(zip(self.names, means, strict=True)):
+            stages = self.owners.count(k)
+            stays.append(f"{name} {number(mean)}" + (f" in {stages} stages" if stages > 1 else ""))
+        return ",  ".join([*parts, f"mean stays {', '.join(stays)}"])
 
 
 class Chain(Term):
@@ -283,8 +370,7 @@ class Chain(Term):
         return Ahead(mean, np.maximum(square - mean * mean, 0.0))
 
     def moments(self, axis, *inputs):
-        chain = self.chain
-        return axis.states(self.address, UNIFORM, chain.p, chain.shares, chain.start, chain.names)
+        return axis.states(self.address, UNIFORM, *self.chain.theory)
 
     def equation(self, *inputs):
         names = ", ".join(f"{i} {name}" for i, name in enumerate(self.chain.names))

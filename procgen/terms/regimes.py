@@ -112,8 +112,7 @@ class Regimes(Term):
     def moments(self, axis, *inputs):
         branches, state = inputs[: len(self.branches)], inputs[-1]
         if self.chain is not None:
-            chain = self.chain
-            state = axis.states(self.address, markov.UNIFORM, chain.p, chain.shares, chain.start, chain.names)
+            state = axis.states(self.address, markov.UNIFORM, *self.chain.theory)
         # The first branch, and in state k what branch k differs by: what all have in common is not multiplied.
         total = branches[0]
         for k, branch in enumerate(branches[1:], start=1):

@@ -39,7 +39,8 @@ class SwitchingNoise(Term):
 
     def scale(self):
         """Unconditional standard deviation, in the series' unit."""
-        squares = [share * (spread * spread) for share, spread in zip(self.chain.shares, self.spreads, strict=True)]
+        shares = self.chain.whole(self.chain.shares)
+        squares = [share * (spread * spread) for share, spread in zip(shares, self.spreads, strict=True)]
         return float(np.sqrt(markov.added(squares)))
 
     def as_member(self):
@@ -75,8 +76,7 @@ class SwitchingNoise(Term):
         return Ahead(np.zeros_like(variance), variance)
 
     def moments(self, axis, *inputs):
-        chain = self.chain
-        return axis.switching(self.address, self.law, self.spreads, chain.p, chain.shares, None, chain.names)
+        return axis.switching(self.address, self.law, self.spreads, *self.chain.theory)
 
     def equation(self, *inputs):
         spreads = ", ".join(f"{number(sd)} in {name}" for name, sd in zip(self.chain.names, self.spreads, strict=True))

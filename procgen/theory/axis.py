@@ -125,14 +125,22 @@ class Axis(Volatile, Stating):
         return self.process(Chain(key, (driver,), p, r), known.constant(p))
 
     def states(
-        self, key: str, law: Any, transitions: Any, shares: Any, start: int | None, names: tuple[str, ...]
+        self,
+        key: str,
+        law: Any,
+        transitions: Any,
+        shares: Any,
+        start: int | None,
+        names: tuple[str, ...],
+        owners: tuple[int, ...],
     ) -> Expression:
         """The number of the state of a Markov chain driven by the stream `key`; `state k` of it is 1 in state k.
 
-        Stationary with the given shares, or from state `start` at step 0.
+        The chain moves between stages; `owners` are the states these belong to. Stationary with the given shares of
+        the stages, or from the stage `start` at step 0.
         """
         chain = States(transitions, shares, start)
-        return markov.number_of_state(self.process, self.source(key, law, 1.0), key, chain, names)
+        return markov.number_of_state(self.process, self.source(key, law, 1.0), key, chain, names, owners)
 
     def switching(self, key: str, law: Any, spreads: Sequence[float], *chain: Any) -> Expression:
         """Shocks with a spread for each state of a chain of their own, given as for `states`; filters take them too."""
@@ -144,7 +152,7 @@ class Axis(Volatile, Stating):
             total = total + self.product([in_state, z * (spread - spreads[0])])
             squares = squares + in_state * (spread**2 - spreads[0] ** 2)
         behind = frozenset(root for x in (z, state) for source in x.sources for root in roots(source))
-        process = Switching(law, np.array(spreads), States(*chain[:3]))
+        process = Switching(law, np.take(spreads, chain[4]), States(*chain[:3]))
         (shocks,) = z.sources
         white = self.space.add(
             Source(f"{key} switching", GARCH, process.variance, law, owner=shocks, detail=process, depends=behind)

@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 from dataclasses import replace
-from functools import partial
+from functools import partial, reduce
+from operator import add
 from typing import Any
 
 import numpy as np
@@ -66,16 +67,20 @@ class Indicator(Process):
         return value, by
 
 
-def number_of_state(make: Any, driver: Expression, name: str, chain: States, names: tuple[str, ...]) -> Expression:
+def number_of_state(
+    make: Any, driver: Expression, name: str, chain: States, names: tuple[str, ...], owners: tuple[int, ...]
+) -> Expression:
     """The number of the state as a series, which offers the indicator of each state k as `state k`.
 
-    `make(process, mean)` is the axis' way to put a process to work.
+    `owners` are the states that the stages of the chain belong to. `make(process, mean)` is the axis' way to put a
+    process to work.
     """
     says: tuple[tuple[str, str], ...] = ()
     if chain.start is not None:
-        leaves = f"{name} leaves from {names[chain.start]}"
+        leaves = f"{name} leaves from {names[owners[chain.start]]}"
         says = ((SETTLES, f"{leaves} and forgets it") if chain.forgets else (VARIES, f"{leaves} and remembers it"),)
-    states = [make(Indicator(name, driver, chain, k, says), _chance(chain, name, k)) for k in range(len(names))]
+    stages = [make(Indicator(name, driver, chain, k, says), _chance(chain, name, k)) for k in range(len(owners))]
+    states = [reduce(add, [x for x, i in zip(stages, owners, strict=True) if i == k]) for k in range(len(names))]
     total = states[1]
     for k, state in enumerate(states[2:], start=2):
         total = total + state * float(k)

@@ -22,6 +22,7 @@ from procgen.spec.declare import (
 )
 from procgen.spec.local import CalendarDays, EveryYear
 from procgen.spec.named import Matrices, Named, Names, Rows
+from procgen.terms.markov import Stays
 
 NOISE = {"white_noise": {"sd": 1}}
 
@@ -52,6 +53,7 @@ def valid(domain, laws):
         Text: st.just("x"),
         Flag: st.booleans(),
         Span: st.integers(1, 50) | st.just("3 steps"),
+        Stays: st.integers(1, 50) | st.just({"mean": 6, "stages": 2}),
         Moment: st.integers(-9, 9),
         Body: st.just([NOISE]),
         CalendarDays: st.just(["2027-12-24", "02-29"]),
