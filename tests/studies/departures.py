@@ -67,19 +67,20 @@ def draw(spec: Any) -> Values:
     return {name: np.array(ensemble[name]) for name in spec.series}
 
 
-def checks(stated: Any, values: Values) -> list[Any]:
-    """The checks of arrays, without the digest (which would see any change of a stored value), not yet a verdict."""
-    from procgen.checks.validate import gathered, judged
+def sums(stated: Any, values: Values) -> Any:
+    """The sums of one pass over arrays."""
+    from procgen.checks.validate import gathered
 
     paths, steps = next(iter(values.values())).shape
-    return list(judged(gathered(_plan(repr(stated), paths, steps), [(0, 0, values)])))
+    return gathered(_plan(repr(stated), paths, steps), [(0, 0, values)])
 
 
 def verdict(stated: Any, values: Values, false_alarm: float = 0.001) -> Any:
-    """The verdict on arrays."""
+    """The verdict on arrays, without the digest (which would see any change of a stored value)."""
+    from procgen.checks.validate import judged
     from procgen.checks.verdict import Verdict
 
-    return Verdict(checks(stated, values), false_alarm)
+    return Verdict(list(judged(sums(stated, values))), false_alarm)
 
 
 def planted(case: Departure, seed: int, paths: int = PATHS, steps: int = STEPS) -> Any:

@@ -92,6 +92,7 @@ def widened(x: np.ndarray, size: float, axis: int) -> np.ndarray:
 # sizes that are worked out from a law
 
 
+@lru_cache(maxsize=8)
 def anderson_darling_shift(size: float, n: int, law: Any = stats.norm) -> float:
     """The shift whose n ∫ (F − G)² / (G (1 − G)) dG is `size`."""
 
@@ -104,6 +105,7 @@ def anderson_darling_shift(size: float, n: int, law: Any = stats.norm) -> float:
     return float(optimize.brentq(excess, 0.0, 2.0))
 
 
+@lru_cache(maxsize=8)
 def score_shift(size: float, column: int, df: float, scaled: bool) -> float:
     """The shift, or log scale, of a t law at which the mean of a score component is `size`."""
     from procgen.chance.laws import LAWS
