@@ -156,6 +156,9 @@ def validate(
     false_alarm: Annotated[
         float, typer.Option(metavar="P", help="Chance of a false alarm over all checks.", min=1e-12, max=0.5)
     ] = 0.001,
+    workers: Annotated[
+        int | None, typer.Option(metavar="N", help="Processes; what the size repays when absent.", min=1)
+    ] = None,
     json: Json = False,
     report: Annotated[Path | None, typer.Option(metavar="FILE.html", help="Also write an HTML report.")] = None,
 ) -> None:
@@ -173,7 +176,7 @@ def validate(
     columns = {role: name for role, name in roles.items() if name is not None} | dict(map(column_of, series_col or ()))
     stated = None if spec is None else pg.load(spec)
     with progress("reading") as tick:
-        verdict = pg.validate(data, stated, false_alarm, columns or None, tick)
+        verdict = pg.validate(data, stated, false_alarm, columns or None, tick, workers)
     written = None if report is None else f"report: {verdict.to_html(report)}"
     printed(verdict_json(verdict) if json else verdict.to_text())
     if written:

@@ -27,7 +27,8 @@ def guarded(command: Callable[..., None]) -> Callable[..., None]:
         except Exception as error:
             _stop(error)
         except KeyboardInterrupt:
-            said("stopped; what was finished is kept, and render goes on with --resume")
+            kept = "; what was finished is kept, and render goes on with --resume"
+            said("stopped" + (kept if command.__name__ == "render" else ""))
             raise typer.Exit(INTERRUPTED) from None
 
     return safe

@@ -7,11 +7,11 @@ linear projections), whatever the law. Each path gives one average of each; thei
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.checks.blocks import Window, add_lagged, add_products
 from procgen.checks.judge import FEW_PATHS, Sample, sample_mean
 from procgen.checks.sums import Powers
 from procgen.checks.verdict import Check
@@ -20,18 +20,15 @@ LAGS = (1, 2, 3, 5)
 _WHAT = (("mean", "level"), ("variance", "spread"), *[("autocorrelation", "memory")] * len(LAGS))
 
 
-@dataclass
 class ErrorLane:
-    """What is carried for one range of paths: sums by path, and the last rows."""
+    """What is carried for one range of paths: sums by path, the last rows, and which of them held errors."""
 
-    sums: NDArray  # (2 + lags, paths)
-    counts: NDArray  # (2 + lags,)
-    beside: NDArray  # products of disjoint pairs of neighbours, (paths // 2,)
-    rows: NDArray
-
-    @classmethod
-    def start(cls, paths: int) -> ErrorLane:
-        return cls(np.zeros((len(_WHAT), paths)), np.zeros(len(_WHAT)), np.zeros(paths // 2), np.zeros((0, paths)))
+    def __init__(self, paths: int):
+        self.sums = np.zeros((len(_WHAT), paths))
+        self.counts = np.zeros(len(_WHAT))
+        self.beside = np.zeros(paths - 1)  # products with the left neighbour
+        self.rows, self.known = Window(max(LAGS), paths), Window(max(LAGS), 1)
+        self.length = np.zeros(paths, dtype=np.int64)
 
 
 class ErrorSums:
@@ -41,30 +38,35 @@ class ErrorSums:
         self.powers = Powers(len(_WHAT))
         self.beside = Powers(1)
 
+    def lane(self, paths: int) -> ErrorLane:
+        return ErrorLane(paths)
+
     def absorb(self, z: NDArray, lane: ErrorLane) -> None:
         """Add a tile (steps, paths) of standardised errors; rows that theory calls constant are NaN throughout."""
-        z = z[~np.isnan(z).all(axis=1)]
-        if not len(z):
-            return
-        past = len(lane.rows)
-        rows = np.concatenate([lane.rows, z])
-        lane.sums[0] += z.sum(axis=0)
-        lane.sums[1] += np.einsum("tp,tp->p", z, z) - len(z)
-        lane.counts[:2] += len(z)
+        finite = np.isfinite(z)
+        known = finite.any(axis=1)
+        lane.length += np.count_nonzero(finite, axis=0)
+        add_products(lane.sums[0], z)
+        add_products(lane.sums[1], z, z)
+        lane.counts[:2] += np.count_nonzero(known)
+        rows, flags = lane.rows.push(z), lane.known.push(known[:, None])
         for k, lag in enumerate(LAGS, start=2):
-            first = max(past, lag)
-            if first < len(rows):
-                lane.sums[k] += np.einsum("tp,tp->p", rows[first:], rows[first - lag : len(rows) - lag])
-                lane.counts[k] += len(rows) - first
-        pairs = 2 * len(lane.beside)
-        lane.beside += np.einsum("tp,tp->p", z[:, 0:pairs:2], z[:, 1:pairs:2])
-        lane.rows = rows[max(0, len(rows) - max(LAGS)) :].copy()
+            add_lagged(lane.sums[k], rows, rows, lag, len(z))
+            count = min(len(z), len(flags) - lag)
+            if count > 0:
+                lane.counts[k] += float((flags[-count:] * flags[len(flags) - lag - count : len(flags) - lag]).sum())
+        if len(lane.beside):
+            add_products(lane.beside, z[:, 1:], z[:, :-1])
 
     def finish(self, lane: ErrorLane) -> None:
-        """Close a range of paths."""
+        """Close a range of paths; one with an error too few is left out."""
         if lane.counts[0]:
-            self.powers.absorb((lane.sums / np.maximum(lane.counts, 1)[:, None]).T)
-            self.beside.absorb(lane.beside[:, None] / lane.counts[0])
+            whole = lane.length == lane.counts[0]
+            sums = np.where(whole, lane.sums, np.nan)
+            sums[1] -= lane.counts[1]
+            self.powers.absorb((sums / np.maximum(lane.counts, 1)[:, None]).T)
+            beside = np.where(whole[1:] & whole[:-1], lane.beside, np.nan)
+            self.beside.absorb(beside[::2, None] / lane.counts[0])  # disjoint pairs
 
     def merge(self, other: ErrorSums) -> None:
         self.powers.merge(other.powers)

@@ -13,7 +13,11 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.checks.blocks import GROUP
+from procgen.checks.gather import Gather
+from procgen.checks.lane import Progress, in_one_process
 from procgen.checks.verdict import Check
+from procgen.ensemble.plan import Block
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -144,9 +148,16 @@ class Table:
             "where": self.where,
         }
 
+    def gathered(self, workers: int | None, progress: Progress | None) -> Gather:
+        """The sums of one pass, by this process: the table is in its memory."""
+        from procgen.checks.validate import plan_of
+
+        plan = plan_of(self.spec, self.steps, self.same_draws)
+        return in_one_process(plan, self.blocks(), Block(0, self.paths, 0, self.steps), progress)
+
     def blocks(self) -> Iterator[tuple[int, int, Mapping[str, np.ndarray]]]:
         """Blocks of whole paths."""
-        width = max(1, min(1024, BLOCK // self.steps))
+        width = max(min(1024, BLOCK // self.steps) // GROUP, 1) * GROUP
         for first in range(0, self.paths, width):
             count = min(width, self.paths - first)
             yield first, 0, {name: self._block(values, first, count) for name, values in self._values.items()}

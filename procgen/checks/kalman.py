@@ -2,7 +2,7 @@
 
 For s[t+1] = A s[t] + B e[t], y[t] = mean[t] + C s[t] (+ rounding noise) the one-step prediction errors divided by
 their standard deviations are independent standard normals if and only if the series is the one stated
-(Kalman 1960; Schweppe 1965). Where the gain has settled, steps are taken in chunks by one matrix product.
+(Kalman 1960; Schweppe 1965). The gains do not depend on the values, so steps are taken in chunks by matrix products.
 """
 
 from __future__ import annotations
@@ -12,8 +12,10 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
-_CHUNK = 32  # steps taken at once after the gain has settled
-_COLUMNS = 256  # paths in one product: small enough that the linear algebra library stays in one thread
+from procgen.checks.blocks import GROUP
+
+_CHUNK = 32  # steps taken at once, from a multiple of it on
+_KEPT = 16 << 20  # bytes of chunks that are kept
 _SETTLED = 1e-13  # relative change of the gain that counts as none
 _LONGEST = 65_536  # the gain is taken as settled after this many steps at the latest
 
@@ -45,6 +47,8 @@ class Kalman:
 
     def __post_init__(self) -> None:
         self._p = np.array(self.p0, dtype=float)
+        self._chunks: dict[tuple[int, int], Chunk] = {}
+        self._bytes = 8 * (_CHUNK + len(self.c)) ** 2
         self._scale = float(np.max(np.abs(np.diag(self._p + self.q)))) or 1.0
 
     def start(self, paths: int) -> NDArray:
@@ -61,24 +65,48 @@ class Kalman:
 
         `state` is the prediction for `step`, the first row of `y`. Rows that the theory calls constant are NaN.
         """
-        out = np.empty_like(y)
-        t = 0
+        out, t = np.empty_like(y), 0
         while t < len(y):
-            self._extend(step + t)
-            if self.settled is not None and step + t >= self.settled and len(y) - t >= _CHUNK:
-                whole = (len(y) - t) // _CHUNK * _CHUNK
-                out[t : t + whole], state = self._chunks(y[t : t + whole], state)
-                t += whole
-                continue
-            state = self._step(y[t], state, min(step + t, len(self.gains) - 1), out[t])
-            t += 1
+            at, left = step + t, len(y) - t
+            self._extend(at + min(left, _CHUNK) - 1)
+            count = min(_CHUNK - at % _CHUNK, left)
+            if count == _CHUNK and self.settled is not None and at >= self.settled:
+                count = left - left % _CHUNK
+            state = self._take(self._chunk(at, min(count, _CHUNK)), y[t : t + count], state, out[t : t + count])
+            t += count
         return out, state
 
-    def _step(self, y: NDArray, state: NDArray, at: int, out: NDArray) -> NDArray:
-        v = y - self.c @ state
-        root = self.roots[at]
-        out[:] = v / root if root > 0 else np.nan
-        return self.a @ state + np.multiply.outer(self.gains[at], v)
+    def _take(self, chunk: Chunk, y: NDArray, state: NDArray, out: NDArray) -> NDArray:
+        """Innovations of rows that are a whole number of chunks; the state after them."""
+        size, paths = len(chunk.h), y.shape[1]
+        if paths % GROUP:
+            columns = y.reshape(-1, size, paths).transpose(1, 0, 2).reshape(size, -1)
+            starts, state = chunk.starts(columns, state)
+            z = chunk.h @ columns - chunk.o @ starts
+            out[...] = z.reshape(size, -1, paths).transpose(1, 0, 2).reshape(out.shape)
+            return state
+        blocks = np.ascontiguousarray(y.reshape(-1, size, paths // GROUP, GROUP).transpose(0, 2, 1, 3))
+        groups = np.ascontiguousarray(state.reshape(len(state), -1, GROUP).transpose(1, 0, 2))
+        pushed = np.matmul(chunk.r, blocks)
+        before = np.empty((len(blocks), *groups.shape))
+        for i, push in enumerate(pushed):
+            before[i] = groups
+            groups = np.matmul(chunk.m, groups) + push
+        z = np.matmul(chunk.h, blocks)
+        z -= np.matmul(chunk.o, before)
+        out.reshape(-1, size, paths // GROUP, GROUP)[...] = z.transpose(0, 2, 1, 3)
+        return groups.transpose(1, 0, 2).reshape(state.shape)
+
+    def _chunk(self, first: int, count: int) -> Chunk:
+        """The chunk of `count` steps from `first` on; those after the gain has settled are all the same."""
+        if self.settled is not None and first >= self.settled:
+            first = self.settled
+        if (first, count) not in self._chunks:
+            while len(self._chunks) * self._bytes > _KEPT:
+                del self._chunks[next(iter(self._chunks))]
+            at = [min(first + i, len(self.gains) - 1) for i in range(count)]
+            self._chunks[first, count] = Chunk(self.a, self.c, [self.gains[k] for k in at], [self.roots[k] for k in at])
+        return self._chunks[first, count]
 
     def _extend(self, step: int) -> None:
         """Gains up to `step`, until they settle."""
@@ -94,7 +122,6 @@ class Kalman:
             self.roots.append(0.0 if known else float(np.sqrt(f)))
             if self._quiet():
                 self.settled = len(self.gains) - 1
-                self._prepare()
 
     def _quiet(self) -> bool:
         if len(self.gains) >= _LONGEST:
@@ -105,37 +132,37 @@ class Kalman:
         close = np.max(np.abs(new - old)) <= _SETTLED * max(float(np.max(np.abs(new))), 1e-300)
         return bool(close) and abs(self.roots[-1] - self.roots[-2]) <= _SETTLED * self.roots[-1]
 
-    def _prepare(self) -> None:
-        """Matrices of one settled chunk: v = H y - O state, state' = M state + R y."""
-        d, gain = len(self.c), self.gains[-1]
-        m = self.a - np.outer(gain, self.c)
-        observe, power, respond = np.empty((_CHUNK, d)), np.eye(d), np.empty((_CHUNK, d))
-        for i in range(_CHUNK):
-            observe[i] = self.c @ power
-            respond[i] = power @ gain
-            power = m @ power
-        h = np.eye(_CHUNK)
-        impulse = respond @ self.c
-        for i in range(1, _CHUNK):
-            h[i, :i] = -impulse[i - 1 :: -1][:i]
-        root = self.roots[-1]
-        self._h, self._o, self._m, self._r = h / root, observe / root, power, respond[::-1].T.copy()
 
-    def _chunks(self, y: NDArray, state: NDArray) -> tuple[NDArray, NDArray]:
-        paths = y.shape[1]
-        blocks = y.reshape(-1, _CHUNK, paths)
-        out, ends = np.empty_like(blocks), np.empty_like(state)
-        for left in range(0, paths, _COLUMNS):
-            some = slice(left, left + _COLUMNS)
-            ends[:, some] = self._some(blocks[:, :, some], state[:, some], out[:, :, some])
-        return out.reshape(y.shape), ends
+class Chunk:
+    """Some steps at once: v = H y − O state, and state' = M state + R y.
 
-    def _some(self, blocks: NDArray, state: NDArray, out: NDArray) -> NDArray:
-        pushed = np.matmul(self._r, blocks)
-        starts = np.empty((len(blocks), *state.shape))
-        for i, push in enumerate(pushed):
-            starts[i] = state
-            state = self._m @ state + push
-        out[...] = np.matmul(self._h, blocks)
-        out -= np.matmul(self._o, starts)
-        return state
+    A sum over columns goes the same way for each of them, since every product has 16 columns, one lane group. What
+    is left beside whole groups are always the same paths.
+    """
+
+    def __init__(self, a: NDArray, c: NDArray, gains: list[NDArray], roots: list[float]):
+        count, d = len(gains), len(c)
+        self.h, self.o = np.zeros((count, count)), np.empty((count, d))
+        self.m, self.r = np.eye(d), np.zeros((d, count))
+        for i, (gain, root) in enumerate(zip(gains, roots, strict=True)):
+            scale = root if root > 0 else np.nan
+            seen = c @ self.r
+            self.o[i] = c @ self.m
+            self.h[i, :i] = -seen[:i]
+            self.h[i, i] = 1.0
+            self.m = a @ self.m - np.outer(gain, self.o[i])
+            self.r = a @ self.r - np.outer(gain, seen)
+            self.r[:, i] = gain
+            self.h[i] /= scale
+            self.o[i] /= scale
+
+    def starts(self, columns: NDArray, state: NDArray) -> tuple[NDArray, NDArray]:
+        """The state before each of a run of chunks, all in columns (size, chunks · paths), and that after the last."""
+        paths = state.shape[1]
+        after = self.r @ columns
+        after[:, :paths] += self.m @ state
+        power, reach = self.m, paths
+        while reach < after.shape[1]:  # after k rounds, the last 2^k chunks are felt
+            after[:, reach:] += power @ after[:, :-reach]
+            power, reach = power @ power, 2 * reach
+        return np.concatenate([state, after[:, :-paths]], axis=1), after[:, -paths:].copy()

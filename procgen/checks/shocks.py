@@ -1,51 +1,40 @@
 """Sums over the recovered shocks of one series: one pass, mergeable, memory free of the number of steps and paths.
 
-Tiles are (steps, paths). A :class:`ShockLane` carries what the next tile of the same paths needs.
+Tiles are (steps, paths), and begin at multiples of 64 steps where sums are to have the same bits for every way of
+cutting. A :class:`ShockLane` carries what the next tile of the same paths needs.
 """
 
 from __future__ import annotations
 
 from collections import Counter
+from collections.abc import Sequence
 from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
 
-from procgen.checks.scores import BINS, Scores, bin_counts, cluster_scores
+from procgen.checks.blocks import GROUP, Window, across, add_lagged, add_products, scratch
+from procgen.checks.scores import BINS, Scores, cluster_scores
+from procgen.checks.uniforms import bin_counts, uniforms
 
 MEMORY_LAGS = (1, 2, 3, 4, 5, 6, 8, 12)
 CLUSTER_LAGS = (1, 2, 3, 5)
 PROFILE = 65_536  # longest profile over steps; longer series share its entries
+_SINGLE = 6  # sums by path that have no lag: of g, g², z, z², asymmetry, neighbours
 
 
-@dataclass
 class ShockLane:
-    """What is carried from tile to tile for one range of paths."""
+    """What is carried from tile to tile for one range of paths.
 
-    scores: NDArray  # the last rows of the normal scores, (at most the longest lag, paths)
-    clusters: NDArray  # of the cluster scores, as many
-    total: NDArray  # per path: sum of scores
-    square: NDArray  # per path: sum of squared scores
-    length: int = 0
+    `scores` and `clusters` hold the last rows; `view` is that of the scores, the newest tile at its end.
+    """
 
-    @classmethod
-    def start(cls, paths: int) -> ShockLane:
-        return cls(np.zeros((0, paths)), np.zeros((0, paths)), np.zeros(paths), np.zeros(paths))
-
-    def only(self, usable: NDArray) -> ShockLane:
-        """The lane of some of the paths."""
-        return ShockLane(
-            self.scores[:, usable], self.clusters[:, usable], self.total[usable], self.square[usable], self.length
-        )
-
-    def put_back(self, part: ShockLane, usable: NDArray) -> None:
-        """Take over what `only` gave; the other paths are broken, and are left out of the sums by path."""
-        for name in ("scores", "clusters"):
-            rows = np.full((len(getattr(part, name)), len(usable)), np.nan)
-            rows[:, usable] = getattr(part, name)
-            setattr(self, name, rows)
-        self.total[usable], self.square[usable], self.length = part.total, part.square, part.length
-        self.total[~usable] = np.nan
+    def __init__(self, paths: int, lags: Sequence[int] = MEMORY_LAGS):
+        self.scores, self.clusters = Window(max(lags), paths), Window(max(CLUSTER_LAGS), paths)
+        self.totals = np.zeros((_SINGLE + len(lags) + len(CLUSTER_LAGS), paths))
+        self.beside = np.zeros(max(paths - 1, 0))  # products with the left neighbour
+        self.length = np.zeros(paths, dtype=np.int64)
+        self.view = np.empty((0, paths))
 
 
 @dataclass
@@ -71,11 +60,10 @@ class ShockSums:
     n: int = 0
     sums: NDArray = field(default_factory=lambda: np.zeros(2))  # sums of z and z²
     counts: NDArray = field(default_factory=lambda: np.zeros(BINS, dtype=np.int64))
-    chains: Counter[int] = field(default_factory=Counter)  # length of a path's run of shocks -> paths
-    rows: Counter[int] = field(default_factory=Counter)  # paths side by side in a tile -> steps
+    chains: Counter[int] = field(default_factory=Counter)  # shocks of a path -> paths
+    rows: Counter[int] = field(default_factory=Counter)  # known paths side by side in a lane group -> steps
     neighbours: float = 0.0
     paths: NDArray = field(default_factory=lambda: np.zeros(5))  # number, sums of level², spread², level, spread
-    unusable: int = 0
     outside: int = 0  # shocks where the law has none
 
     def __post_init__(self) -> None:
@@ -86,97 +74,112 @@ class ShockSums:
         self.cluster = np.zeros((2, len(CLUSTER_LAGS)))
         self.asymmetry = np.zeros(2)
 
-    def absorb(self, z: NDArray, first_step: int, lane: ShockLane) -> NDArray:
-        """Add the shocks of a tile; returns their normal scores, NaN where there is no shock."""
+    def lane(self, paths: int) -> ShockLane:
+        return ShockLane(paths, self.lags)
+
+    def absorb(self, z: NDArray, first_step: int, lane: ShockLane) -> None:
+        """Add the shocks of a tile, NaN where there is none."""
         known = np.isfinite(z)
-        usable = known.any(axis=0)
-        first = int(np.argmax(known[:, usable].all(axis=1))) if usable.any() else len(z)
-        g = np.full(z.shape, np.nan)
-        if not usable.any() or not known[first:, usable].all():
-            usable = known[first:].all(axis=0)
-            self.unusable += int(np.count_nonzero(~usable & known.any(axis=0)))
-        if usable.all():
-            g[first:] = self._add(z[first:], first_step + first, lane)
-            return g
-        part = lane.only(usable)
-        g[first:, usable] = self._add(z[first:][:, usable], first_step + first, part)
-        lane.put_back(part, usable)
-        return g
-
-    def _add(self, z: NDArray, first_step: int, lane: ShockLane) -> NDArray:
-        from scipy.special import ndtr
-
-        if z.size == 0:
-            return z
-        z = np.ascontiguousarray(z)
+        whole, offset = bool(known.all()), 0
+        if not whole and not lane.scores.held:  # nothing is carried so far: it begins with the first shock
+            offset = int(np.argmax(known.any(axis=1)))
+            z, known = z[offset:], known[offset:]
+            whole = bool(known.all())
+            if not known[0].any():
+                return
+        self.n += z.size if whole else int(np.count_nonzero(known))
+        lane.length += len(z) if whole else known.sum(axis=0)
         self.outside += self.scores.outside(z)
         g = self.scores.normal_scores(z)
-        u = ndtr(g)
-        self.n += z.size
-        self.sums += z.sum(), np.einsum("tp,tp->", z, z)
-        self.counts += bin_counts(u)
-        self._along(g, cluster_scores(u), lane)
-        self._across(g, first_step)
-        lane.total += g.sum(axis=0)
-        lane.square += np.einsum("tp,tp->p", g, g)
-        lane.length += len(g)
-        return g
+        u = uniforms(g)
+        self.counts += bin_counts(u if whole else u[known])
+        clusters = cluster_scores(u)
+        self._single(z, g, lane, offset)
+        self._along(g, clusters, lane, offset)
+        self._across(g, known, whole, first_step + offset, lane, offset)
 
-    def _along(self, g: NDArray, clusters: NDArray, lane: ShockLane) -> None:
+    def _single(self, z: NDArray, g: NDArray, lane: ShockLane, offset: int) -> None:
+        add_products(lane.totals[0], g, None, offset)
+        add_products(lane.totals[1], g, g, offset)
+        if not self.scores.gaussian:
+            add_products(lane.totals[2], z, None, offset)
+            add_products(lane.totals[3], z, z, offset)
+
+    def _along(self, g: NDArray, clusters: NDArray, lane: ShockLane, offset: int) -> None:
         """Products with earlier steps of the same path."""
-        past = len(lane.scores)
-        rows = np.concatenate([lane.scores, g]) if past else g
-        clusters = np.concatenate([lane.clusters, clusters]) if past else clusters
+        lane.view, squares = lane.scores.push(g), lane.clusters.push(clusters)
+        rows = lane.totals[_SINGLE:]
         for i, lag in enumerate(self.lags):
-            self.memory[:, i] += _products(rows, rows, lag, past)
+            self.memory[0, i] += add_lagged(rows[i], lane.view, lane.view, lag, len(g), offset)
         for i, lag in enumerate(CLUSTER_LAGS):
-            self.cluster[:, i] += _products(clusters, clusters, lag, past)
-        self.asymmetry += _products(clusters, rows, 1, past)
-        keep = max(0, len(rows) - max(self.lags))
-        lane.scores, lane.clusters = rows[keep:].copy(), clusters[keep:].copy()
+            total = rows[len(self.lags) + i]
+            self.cluster[0, i] += add_lagged(total, squares, squares, lag, len(g), offset)
+        self.asymmetry[0] += add_lagged(lane.totals[4], squares, lane.view, 1, len(g), offset)
 
-    def _across(self, g: NDArray, first_step: int) -> None:
-        """Profile by step, and products with the neighbouring path."""
-        at = (first_step + np.arange(len(g))) // self.width
-        for row, values in enumerate((np.full(len(g), float(g.shape[1])), g.sum(axis=1), np.einsum("tp,tp->t", g, g))):
-            np.add.at(self.profile[row], at, values)
-        if g.shape[1] > 1:
-            self.neighbours += float(np.einsum("tp,tp->", g[:, 1:], g[:, :-1]))
-            self.rows[g.shape[1]] += len(g)
+    def _across(
+        self, g: NDArray, known: NDArray, whole: bool, first_step: int, lane: ShockLane, offset: int
+    ) -> None:
+        """Profile by step, and products with the neighbouring path of the same lane group."""
+        paths = g.shape[1]
+        counts = np.full(len(g), float(paths)) if whole else known.sum(axis=1).astype(float)
+        g = g if whole else np.where(known, g, 0.0)
+        square = np.multiply(g, g, out=scratch(*g.shape))
+        at = slice(first_step, first_step + len(g)) if self.width == 1 else None
+        places = (first_step + np.arange(len(g))) // self.width
+        for row, values in zip(self.profile, (counts, across(g), across(square)), strict=True):
+            if at is not None:
+                row[at] += values
+            else:
+                np.add.at(row, places, values)
+        if paths > 1:
+            add_products(lane.beside, g[:, 1:], g[:, :-1], offset)
+            self.rows.update({min(paths, GROUP): len(g) * -(-paths // GROUP)} if whole else _runs(known))
 
     def finish(self, lane: ShockLane) -> None:
         """Close a range of paths whose last step has been absorbed."""
         from scipy.special import chdtr, ndtri
 
-        if not lane.length:
-            return
-        n = lane.length
-        usable = np.isfinite(lane.total)
-        count = int(np.count_nonzero(usable))
-        self.chains[n] += count
-        level = lane.total[usable] / np.sqrt(n)
-        spread = ndtri(np.clip(chdtr(n, lane.square[usable]), 1e-300, 1 - 1e-16))
-        self.paths += count, float(level @ level), float(spread @ spread), float(level.sum()), float(spread.sum())
+        lane.totals[5, 1:] = lane.beside
+        lane.totals[5, ::GROUP] = 0.0  # whose left neighbour is of another lane group
+        totals = across(lane.totals)
+        self.sums += totals[:2] if self.scores.gaussian else totals[2:4]
+        self.asymmetry[1] += totals[4]
+        self.neighbours += float(totals[5])
+        self.memory[1] += totals[_SINGLE : _SINGLE + len(self.lags)]
+        self.cluster[1] += totals[_SINGLE + len(self.lags) :]
+        some = lane.length > 0
+        n = np.maximum(lane.length, 1)
+        level = np.where(some, lane.totals[0] / np.sqrt(n), 0.0)
+        spread = np.where(some, ndtri(np.clip(chdtr(n, lane.totals[1]), 1e-300, 1 - 1e-16)), 0.0)
+        self.paths += across(np.array([some.astype(float), level * level, spread * spread, level, spread]))
+        lengths, paths = np.unique(lane.length[some], return_counts=True)
+        self.chains.update(dict(zip(lengths.tolist(), paths.tolist(), strict=True)))
 
     def merge(self, other: ShockSums) -> None:
         """Add the sums of other paths."""
         self.n += other.n
         self.neighbours += other.neighbours
-        self.unusable += other.unusable
         self.outside += other.outside
         self.chains.update(other.chains)
         self.rows.update(other.rows)
-        for name in ("sums", "counts", "paths", "profile", "memory", "cluster", "asymmetry"):
+        for name in SHOCK_ARRAYS:
             getattr(self, name)[...] += getattr(other, name)
 
 
-def _products(later: NDArray, earlier: NDArray, lag: int, past: int) -> tuple[float, float]:
-    """(pairs, sum) of later[t] * earlier[t - lag] over the rows behind the `past` ones carried over."""
-    start = max(past, lag)
-    if start >= len(later):
-        return 0.0, 0.0
-    a, b = later[start:], earlier[start - lag : len(earlier) - lag]
-    return float(a.size), float(np.einsum("i,i->", a.ravel(), b.ravel()))
+SHOCK_ARRAYS = ("sums", "counts", "paths", "profile", "memory", "cluster", "asymmetry")
+
+
+def _runs(known: NDArray) -> dict[int, int]:
+    """Lengths of the runs of known paths (steps, paths) within lane groups, and how often each occurs."""
+    steps, paths = known.shape
+    groups = -(-paths // GROUP)
+    padded = np.zeros((steps, groups, GROUP + 1), dtype=np.int8)
+    wide = np.zeros((steps, groups * GROUP), dtype=np.int8)
+    wide[:, :paths] = known
+    padded[:, :, :GROUP] = wide.reshape(steps, groups, GROUP)
+    edges = np.flatnonzero(np.diff(padded.ravel(), prepend=0))
+    lengths, counts = np.unique(edges[1::2] - edges[::2], return_counts=True)
+    return dict(zip(lengths.tolist(), counts.tolist(), strict=True))
 
 
 class CrossSums:
@@ -189,32 +192,24 @@ class CrossSums:
         self.lags = lags
         self.sums = {lag: np.zeros(2) for lag in lags}
 
-    def absorb(self, a: NDArray, b: NDArray, carry: tuple[NDArray, NDArray] | None) -> tuple[NDArray, NDArray]:
-        """Add a tile of both, (steps, paths), NaN where unknown; returns what to carry to the next tile."""
-        reach = max(abs(lag) for lag in self.lags)
-        past = 0
-        if carry is not None:
-            past = len(carry[0])
-            a, b = np.concatenate([carry[0], a]), np.concatenate([carry[1], b])
-        whole = np.isfinite(a).all() and np.isfinite(b).all()
-        for lag in self.lags:
+    def lane(self, paths: int) -> NDArray:
+        """What is carried for one range of paths: totals (lags, paths)."""
+        return np.zeros((len(self.lags), paths))
+
+    def absorb(self, a: NDArray, b: NDArray, steps: int, ready: int, totals: NDArray) -> None:
+        """Add the last `steps` steps of the views of two windows of scores, (steps, paths), NaN where unknown.
+
+        Of these, and of what came before them, only those count that are not before step `ready` of the new ones.
+        """
+        for k, lag in enumerate(self.lags):
             later, earlier = (a, b) if lag >= 0 else (b, a)
-            if whole:
-                self.sums[lag] += _products(later, earlier, abs(lag), past)
-            else:
-                self.sums[lag] += _known_products(later, earlier, abs(lag), past)
-        keep = max(0, len(a) - reach)
-        return a[keep:].copy(), b[keep:].copy()
+            new = min(steps, steps - ready - abs(lag))
+            self.sums[lag][0] += add_lagged(totals[k], later, earlier, abs(lag), new, steps - new)
+
+    def finish(self, totals: NDArray) -> None:
+        for lag, total in zip(self.lags, across(totals), strict=True):
+            self.sums[lag][1] += total
 
     def merge(self, other: CrossSums) -> None:
         for lag in self.lags:
             self.sums[lag] += other.sums[lag]
-
-
-def _known_products(later: NDArray, earlier: NDArray, lag: int, past: int) -> tuple[float, float]:
-    start = max(past, lag)
-    if start >= len(later):
-        return 0.0, 0.0
-    product = later[start:] * earlier[start - lag : len(earlier) - lag]
-    known = np.isfinite(product)
-    return float(np.count_nonzero(known)), float(product[known].sum())

@@ -1,16 +1,23 @@
-"""Where the values come from: an ensemble of ours, or a table of anyone's, as blocks in the order of their steps."""
+"""Where the values come from: an ensemble of ours, or a table of anyone's; and the sums of one pass over them."""
 
 from __future__ import annotations
 
 import copy
-from collections.abc import Iterator, Mapping
+from collections.abc import Mapping
 from pathlib import Path
 from typing import Any, Protocol
 
-import numpy as np
-
 from procgen.checks.foreign import TableError
+from procgen.checks.gather import Gather
+from procgen.checks.lane import in_one_process
+from procgen.checks.parts import WORK, is_whole, plan_for, tasks, unpacked
+from procgen.checks.rectangles import grouped, named
+from procgen.checks.tree import Tree
 from procgen.checks.verdict import Check
+from procgen.ensemble import engines
+from procgen.ensemble.engines import Progress
+
+WORTH = 16_000_000  # values that repay one more process: it derives the theory for itself
 
 
 class Origin(Protocol):
@@ -23,7 +30,7 @@ class Origin(Protocol):
     columns: dict[str, str]  # series of `spec` -> the name that the reader knows
     same_draws: bool  # whether drawn parameters of a path are those that `spec` draws for it
 
-    def blocks(self) -> Iterator[tuple[int, int, Mapping[str, np.ndarray]]]: ...
+    def gathered(self, workers: int | None, progress: Progress | None) -> Gather: ...
     def checks(self) -> list[Check]: ...
     def about(self) -> dict[str, Any]: ...
 
@@ -82,7 +89,6 @@ class EnsembleOrigin:
         if missing:
             raise TableError(f"the ensemble has no series {', '.join(missing)}; it has {', '.join(ensemble.names)}")
         self.spec, self.columns = with_revealed(self.spec, [c.name for c in ensemble.columns if c.revealed])
-        self._nodes: list[tuple[Any, dict[str, Any]]] = []
 
     def checks(self) -> list[Check]:
         return []
@@ -99,76 +105,41 @@ class EnsembleOrigin:
             "spec_digest": self.spec.digest(),
         }
 
-    def blocks(self) -> Iterator[tuple[int, int, Mapping[str, np.ndarray]]]:
-        """Blocks of the spec's series; parts that cannot be read become faults."""
-        manifest = getattr(self.ensemble, "manifest", None)
-        if manifest is None:
-            for first_path, first_step, values in self.ensemble.blocks():
-                yield first_path, first_step, {name: values[column] for name, column in self.columns.items()}
-            return
-        chains: dict[tuple[int, int], list[Any]] = {}
-        for part in manifest.parts:
-            chains.setdefault((part.block.first_path, part.block.end_path), []).append(part)
-        for (first, end), parts in chains.items():
-            yield from self._chain(first, end, parts)
-        self._compare_digests(manifest)
+    def gathered(self, workers: int | None, progress: Progress | None) -> Gather:
+        """The sums of one pass: of the parts on disk by several processes, of an ensemble in memory by this one."""
+        if getattr(self.ensemble, "manifest", None) is not None:
+            return self._from_parts(workers, progress)
+        from procgen.checks.validate import plan_of
 
-    def _chain(self, first: int, end: int, parts: list[Any]) -> Iterator[tuple[int, int, Mapping[str, np.ndarray]]]:
-        """The parts of one range of paths; one that cannot be read becomes a fault."""
-        from procgen.ensemble.errors import EnsembleError
+        blocks = grouped(named(self.ensemble.blocks(), self.columns), self.ensemble.whole)
+        return in_one_process(plan_of(self.spec, self.steps, self.same_draws), blocks, self.ensemble.whole, progress)
 
-        pieces = self.ensemble.stored(first, end)
-        part = parts[0]
-        try:
-            for part in parts:
-                # Parts that follow each other must be cut at the same paths, hence each is handed on whole.
-                yield from self._pieces(part, pieces) if len(parts) == 1 else [self._whole(part, pieces)]
-            next(pieces, None)  # what comes after the last row is looked at, too
-        except EnsembleError as error:
-            self.faults.append(Check.fact("", "rows in order", str(part.block), str(error)))
+    def _from_parts(self, workers: int | None, progress: Progress | None) -> Gather:
+        todo = tasks(self.ensemble, self.spec, self.columns, self.same_draws)
+        tree: Tree[Gather] = Tree()
+        nodes: dict[int, dict[str, str]] = {}
 
-    def _pieces(self, part: Any, pieces: Iterator[Any]) -> Iterator[tuple[int, int, Mapping[str, np.ndarray]]]:
-        """The pieces of a part as they are stored; its digest is made on the way."""
-        from procgen.ensemble import digest
-        from procgen.ensemble.columns import as_float
+        def keep(records: list[dict[str, Any]]) -> None:
+            plan = plan_for(todo[0])
+            for record in records:
+                nodes.update(record["nodes"])
+                self.faults += [Check.fact("", "rows in order", where, what) for where, what in record["faults"]]
+                for first, end, facts, arrays in record["sums"]:
+                    tree.add(first, end, unpacked(plan, facts, arrays))
 
-        leaves = {name: digest.Leaves(part.block) for name in self.ensemble.names}
-        left = part.block.rows
-        while left:
-            block, values = next(pieces)
-            left -= block.rows
-            numbers = {name: as_float(values[name]) for name in leaves}
-            for name, leaf in leaves.items():
-                leaf.add(block.first_path, block.first_step, numbers[name])
-            yield block.first_path, block.first_step, {name: numbers[column] for name, column in self.columns.items()}
-        whole = self.ensemble.manifest.whole
-        self._nodes.append((part, {name: leaf.nodes(whole) for name, leaf in leaves.items()}))
+        if workers is None:
+            workers = engines.default_workers(self.rows * len(self.columns), WORTH)
+        engines.run(todo, WORK, keep, workers, progress, 0, self.rows, advice="use fewer --workers")
+        self.faults.sort(key=lambda check: check.probe)
+        self._compare_digests(nodes)
+        return tree.total(Gather(plan_for(todo[0])))
 
-    def _whole(self, part: Any, pieces: Iterator[Any]) -> tuple[int, int, Mapping[str, np.ndarray]]:
-        block = part.block
-        out = {name: np.empty((block.paths, block.steps)) for name in self.columns}
-        for first_path, first_step, values in self._pieces(part, pieces):
-            for name, numbers in values.items():
-                path, step = first_path - block.first_path, first_step - block.first_step
-                out[name][path : path + len(numbers), step : step + numbers.shape[1]] = numbers
-        return block.first_path, block.first_step, out
-
-    def _compare_digests(self, manifest: Any) -> None:
+    def _compare_digests(self, nodes: Mapping[int, Mapping[str, str]]) -> None:
         """Every value is the one that was written, or the first place where it is not."""
-        from procgen.ensemble import check_digest, digest
-        from procgen.ensemble.manifest import node
+        from procgen.ensemble import check_digest
 
-        good = len(self._nodes) == len(manifest.parts) and all(
-            node({name: digest.pack(each) for name, each in nodes.items()}) == part.node for part, nodes in self._nodes
-        )
-        if good:
-            blocks = [(part.block, nodes) for part, nodes in self._nodes]
-            good = all(
-                digest.root([(block, nodes[name]) for block, nodes in blocks], manifest.whole) == recorded
-                for name, recorded in {**manifest.stored, **manifest.revealed}.items()
-            )
-        if good:
-            note = f"every value is the one that was drawn ({manifest.digest[:12]}…)"
+        if is_whole(self.ensemble, nodes):
+            note = f"every value is the one that was drawn ({self.ensemble.digest[:12]}…)"
             self.faults.append(Check.fact("", "rows in order", "all parts", "", "every path and step once, in order"))
             self.faults.append(Check.fact("", "digest", "all parts", "", note))
             return

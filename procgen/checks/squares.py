@@ -14,6 +14,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.checks.blocks import Window, add_products
 from procgen.checks.judge import FEW_PATHS, Sample, sample_mean
 from procgen.checks.sums import Powers
 from procgen.checks.verdict import Check
@@ -48,17 +49,14 @@ def plan_squares(theory: Any, steps: int) -> Squares | None:
     return Squares(theory, float(variance[0]), float(squares[0]), slopes, highest)
 
 
-@dataclass
 class SquareLane:
     """What is carried for one range of paths: sums by path, pairs, and the last rows."""
 
-    sums: NDArray  # (lags, paths)
-    counts: NDArray  # (lags,)
-    rows: NDArray
-
-    @classmethod
-    def start(cls, paths: int) -> SquareLane:
-        return cls(np.zeros((len(LAGS), paths)), np.zeros(len(LAGS)), np.zeros((0, paths)))
+    def __init__(self, paths: int):
+        self.sums = np.zeros((len(LAGS), paths))
+        self.counts = np.zeros(len(LAGS))
+        self.unknown = np.zeros(paths, dtype=bool)
+        self.rows = Window(max(LAGS), paths)
 
 
 class SquareSums:
@@ -68,24 +66,27 @@ class SquareSums:
         self.plan = plan
         self.powers = Powers(len(LAGS))
 
+    def lane(self, paths: int) -> SquareLane:
+        return SquareLane(paths)
+
     def absorb(self, x: NDArray, first_step: int, lane: SquareLane) -> None:
         """Add a tile (steps, paths) of values."""
         mean = np.asarray(self.plan.theory.mean(np.arange(first_step, first_step + len(x))))
         q = (x - mean[:, None]) ** 2 - self.plan.variance
-        past = len(lane.rows)
-        rows = np.concatenate([lane.rows, q])
+        lane.unknown |= ~np.isfinite(q).all(axis=0)
+        rows = lane.rows.push(q)
         for k, lag in enumerate(LAGS):
-            first = max(past, lag)
-            if first < len(rows):
-                earlier = rows[first - lag : len(rows) - lag]
-                lane.sums[k] += np.einsum("tp,tp->p", rows[first:] - self.plan.slopes[k] * earlier, earlier)
-                lane.counts[k] += len(rows) - first
-        lane.rows = rows[max(0, len(rows) - max(LAGS)) :].copy()
+            count = min(len(x), len(rows) - lag)
+            if count > 0:
+                later, earlier = rows[len(rows) - count :], rows[len(rows) - lag - count : len(rows) - lag]
+                add_products(lane.sums[k], later - self.plan.slopes[k] * earlier, earlier, len(x) - count)
+                lane.counts[k] += count
 
     def finish(self, lane: SquareLane) -> None:
-        """Close a range of paths."""
+        """Close a range of paths; one with an unknown value is left out."""
         if lane.counts.all():
-            self.powers.absorb((lane.sums / lane.counts[:, None]).T / self.plan.spread)
+            sums = np.where(lane.unknown, np.nan, lane.sums)
+            self.powers.absorb((sums / lane.counts[:, None]).T / self.plan.spread)
 
     def merge(self, other: SquareSums) -> None:
         self.powers.merge(other.powers)

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 
 from procgen.checks.verdict import Check
 
-_SAMPLE = 16  # paths of each tile whose bits are looked at for a detour through float32
+_SAMPLE = 61  # every so manieth step's bits are looked at for a detour through float32; at least 32 steps
 _SPACING = {"float32": 2.0**-24 + 4e-16}  # how far, of its size, a stored decimal number may lie from itself
 _CERTAIN = 1e-12  # expected number of equal pairs below which one equal pair is no chance
 
@@ -32,6 +32,7 @@ class Structure:
     """Facts gathered along the pass, for all series together."""
 
     series: Sequence[Precision]
+    steps: int = 1  # of the whole ensemble
     not_finite: dict[str, list[int]] = field(default_factory=dict)  # series -> [count, path, step of the first]
     off_grid: dict[str, list[int]] = field(default_factory=dict)
     narrow: dict[str, list[int]] = field(default_factory=dict)  # series -> [values that fit float32, whole ones, all]
@@ -51,7 +52,8 @@ class Structure:
             if off.any():
                 _note(self.off_grid, what.name, off, first_path, first_step)
         elif what.type != "int64" and what.random and not what.discrete:
-            sample = x[:, :_SAMPLE]
+            stride = max(1, min(_SAMPLE, self.steps // 32))
+            sample = x[-first_step % stride :: stride]
             with np.errstate(over="ignore", invalid="ignore"):
                 fits = int(np.count_nonzero(sample.astype(np.float32) == sample))
                 whole = int(np.count_nonzero(np.rint(sample) == sample))
@@ -62,6 +64,18 @@ class Structure:
 
     def close(self, first_path: int, prints: NDArray[np.uint64]) -> None:
         self.prints.append((first_path, prints))
+
+    def printed(self) -> dict[str, NDArray]:
+        """The fingerprints as named arrays."""
+        first = np.array([path for path, _ in self.prints], dtype=np.int64)
+        sizes = np.array([len(rows) for _, rows in self.prints], dtype=np.int64)
+        none = np.zeros((0, len(self.series)), dtype=np.uint64)
+        return {"first": first, "sizes": sizes, "prints": np.concatenate([none, *(rows for _, rows in self.prints)])}
+
+    def take_prints(self, arrays: Mapping[str, NDArray]) -> None:
+        """Take over what `printed` gave."""
+        rows = np.split(arrays["prints"], np.cumsum(arrays["sizes"])[:-1])
+        self.prints = list(zip(arrays["first"].tolist(), rows, strict=True)) if len(arrays["first"]) else []
 
     def merge(self, other: Structure) -> None:
         for mine, theirs in ((self.not_finite, other.not_finite), (self.off_grid, other.off_grid)):

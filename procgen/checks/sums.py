@@ -1,94 +1,157 @@
-"""Mergeable sums over paths: moments of the values at probes, and powers of whatever is averaged along a path."""
+"""Mergeable sums over paths: moments of the values at probes, and powers of whatever is averaged along a path.
+
+All are made so that the sums of a range of paths are those of its left half merged with those of its right half,
+bit for bit (see `blocks`).
+"""
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Sequence
 
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.checks.blocks import GROUP, across
+
+_TOGETHER = 64  # pairs of places whose products are made at once
 KEPT = 20_000  # paths whose values at probes are kept for tests of a known law
 
 
 class Moments:
-    """Count, mean and scatter matrix of vectors (paths, size), merged without loss (Chan, Golub & LeVeque 1983)."""
+    """Count, mean and scatter of vectors (paths, size), merged without loss (Chan, Golub & LeVeque 1983).
 
-    def __init__(self, size: int):
+    The scatter is kept for the `pairs` of places (i, j), i ≤ j; (i, i) must be among them.
+    """
+
+    def __init__(self, size: int, pairs: Sequence[tuple[int, int]] | None = None):
+        pairs = [(i, j) for i in range(size) for j in range(i, size)] if pairs is None else pairs
+        self.pairs = {pair: k for k, pair in enumerate(pairs)}
+        self._i, self._j = (np.array([pair[side] for pair in self.pairs], dtype=np.intp) for side in (0, 1))
         self.n = 0
         self.mean = np.zeros(size)
-        self.scatter = np.zeros((size, size))
+        self.products = np.zeros(len(self.pairs))
 
     def absorb(self, rows: NDArray) -> None:
-        if not len(rows):
-            return
-        mean = rows.mean(axis=0)
-        centred = rows - mean
-        self._add(len(rows), mean, centred.T @ centred)
+        """Add vectors (paths, size); one with an element that is not finite is left out."""
+        groups = len(rows) // GROUP if len(rows) % GROUP == 0 else 1
+        known = np.isfinite(rows).all(axis=1)
+        rows = np.where(known[:, None], rows, 0.0).reshape(groups, -1, len(self.mean))
+        known = known.reshape(groups, -1)
+        n = known.sum(axis=1)
+        mean = across(rows.transpose(0, 2, 1)) / np.maximum(n, 1)[:, None]
+        centred = np.where(known[:, :, None], rows - mean[:, None, :], 0.0).transpose(2, 0, 1)
+        at = range(0, len(self.pairs), _TOGETHER)
+        sums = [across(centred[self._i[k : k + _TOGETHER]] * centred[self._j[k : k + _TOGETHER]]) for k in at]
+        products = np.concatenate([np.zeros((0, groups)), *sums]).T
+        while len(n) > 1:
+            if len(n) % 2:
+                n, mean, products = (np.concatenate([x, np.zeros_like(x[:1])]) for x in (n, mean, products))
+            n, mean, products = self._joined(
+                n[0::2], mean[0::2], products[0::2], n[1::2], mean[1::2], products[1::2]
+            )
+        self._add(n, mean, products)
 
     def merge(self, other: Moments) -> None:
-        if other.n:
-            self._add(other.n, other.mean, other.scatter)
+        self._add(np.array([other.n]), other.mean[None], other.products[None])
 
-    def _add(self, n: int, mean: NDArray, scatter: NDArray) -> None:
-        total = self.n + n
-        step = mean - self.mean
-        self.scatter += scatter + np.outer(step, step) * (self.n * n / total)
-        self.mean += step * (n / total)
-        self.n = total
+    def _add(self, n: NDArray, mean: NDArray, products: NDArray) -> None:
+        total, means, sums = self._joined(np.array([self.n]), self.mean[None], self.products[None], n, mean, products)
+        self.n, self.mean, self.products = int(total[0]), means[0], sums[0]
+
+    def _joined(
+        self, n: NDArray, mean: NDArray, products: NDArray, m: NDArray, others: NDArray, more: NDArray
+    ) -> tuple[NDArray, NDArray, NDArray]:
+        """Both sides together, row by row."""
+        total = n + m
+        share = (m / np.maximum(total, 1))[:, None]
+        step = np.where((n > 0)[:, None], others - mean, others)
+        weight = n[:, None] * share
+        products = products + (more + step[:, self._i] * step[:, self._j] * weight)
+        means = np.where((n > 0)[:, None], mean + step * share, np.where((m > 0)[:, None], others, mean))
+        return total, means, products
 
     def covariance(self, i: int, j: int) -> float:
         """Sample covariance with n - 1 in the denominator."""
-        return float(self.scatter[i, j]) / (self.n - 1)
+        return float(self.products[self.pairs[min(i, j), max(i, j)]]) / (self.n - 1)
+
+    @property
+    def scatter(self) -> dict[tuple[int, int], float]:
+        """Sums over the paths of the products of the deviations from the means, by pair of places."""
+        return dict(zip(self.pairs, self.products.tolist(), strict=True))
 
 
 class Powers:
-    """Sums of the first four powers of statistics (paths, size), NaN rows left out, and neighbouring products."""
+    """Sums of the first four powers of statistics (paths, size), NaN left out, and neighbouring products."""
 
     def __init__(self, size: int):
         self.n = np.zeros(size, dtype=np.int64)
         self.sums = np.zeros((4, size))
         self.pairs = np.zeros((2, size))  # neighbours: their number, the sum of their products
+        self.ends = np.full((2, size), np.nan)  # the first path and the last one
+        self.paths = 0
 
     def absorb(self, rows: NDArray) -> None:
+        """Add statistics (paths, size) of the paths that follow."""
+        if not rows.size:
+            return
+        part = Powers(len(self.n))
         known = np.isfinite(rows)
-        self.n += known.sum(axis=0)
-        rows = np.where(known, rows, 0.0)
-        power = rows
+        part.n += known.sum(axis=0)
+        part.paths = len(rows)
+        values = np.where(known, rows, 0.0)
+        power = values
         for k in range(4):
-            self.sums[k] += power.sum(axis=0)
-            power = power * rows
-        self.pairs[0] += (known[1:] & known[:-1]).sum(axis=0)
-        self.pairs[1] += (rows[1:] * rows[:-1]).sum(axis=0)
+            part.sums[k] = across(power.T)
+            power = power * values
+        part.pairs, part.ends = _neighbours(np.where(known, rows, np.nan))
+        self.merge(part)
 
     def merge(self, other: Powers) -> None:
+        """Add the sums of the paths that follow."""
         self.n += other.n
         self.sums += other.sums
         self.pairs += other.pairs
+        self.pairs += _beside(self.ends[1], other.ends[0])
+        if other.paths:
+            self.ends = np.array([self.ends[0] if self.paths else other.ends[0], other.ends[1]])
+        self.paths += other.paths
 
 
-@dataclass
+def _beside(left: NDArray, right: NDArray) -> NDArray:
+    """Number and sum of the products of neighbours."""
+    product = left * right
+    known = np.isfinite(product)
+    return np.array([known.astype(float), np.where(known, product, 0.0)])
+
+
+def _neighbours(rows: NDArray) -> tuple[NDArray, NDArray]:
+    """Pairs within (paths, size), joined by halves, and the outer rows."""
+    ends = np.array([rows, rows])
+    pairs = np.zeros(ends.shape)
+    while ends.shape[1] > 1:
+        if ends.shape[1] % 2:
+            ends = np.concatenate([ends, np.full((2, 1, ends.shape[2]), np.nan)], axis=1)
+            pairs = np.concatenate([pairs, np.zeros((2, 1, ends.shape[2]))], axis=1)
+        pairs = pairs[:, 0::2] + pairs[:, 1::2] + _beside(ends[1, 0::2], ends[0, 1::2])
+        ends = np.array([ends[0, 0::2], ends[1, 1::2]])
+    return pairs[:, 0], ends[:, 0]
+
+
 class Kept:
     """Values of the first KEPT paths at each of some probes."""
 
-    size: int
+    def __init__(self, size: int):
+        self.rows = np.zeros((0, size))
 
-    def __post_init__(self) -> None:
-        self.rows: list[tuple[int, NDArray]] = []
-        self.count = 0
-
-    def absorb(self, first_path: int, rows: NDArray) -> None:
-        if self.count < KEPT and self.size:
-            rows = rows[: KEPT - self.count]
-            self.rows.append((first_path, rows.copy()))
-            self.count += len(rows)
+    def absorb(self, rows: NDArray) -> None:
+        """Add the values (paths, size) of the paths that follow."""
+        if len(self.rows) < KEPT and rows.shape[1]:
+            self.rows = np.concatenate([self.rows, rows[: KEPT - len(self.rows)]])
 
     def merge(self, other: Kept) -> None:
-        self.rows = sorted(self.rows + other.rows, key=lambda item: item[0])
-        self.count += other.count
+        """Add those of the paths that follow."""
+        self.absorb(other.rows)
 
     def values(self) -> NDArray:
         """(paths, size), paths with a value that is not finite left out."""
-        if not self.rows:
-            return np.zeros((0, self.size))
-        rows = np.concatenate([rows for _, rows in self.rows])
-        return rows[np.isfinite(rows).all(axis=1)]
+        return self.rows[np.isfinite(self.rows).all(axis=1)]

@@ -13,11 +13,13 @@ import numpy as np
 from procgen.checks.gather import Gather, Plan
 from procgen.checks.judge_moments import cross_moments, moment_checks
 from procgen.checks.judge_shocks import cross_checks, shock_checks
+from procgen.checks.lane import in_one_process
 from procgen.checks.probes import PAIR_LIMIT, SeriesPlan, plan_cross, plan_series
 from procgen.checks.recover import Cannot, Expected, Route, expected, route
 from procgen.checks.squares import plan_squares
 from procgen.checks.structure import Precision
 from procgen.checks.verdict import Check, Verdict
+from procgen.ensemble.plan import Block
 
 _LONGEST = 1 << 14  # steps over which the end of a forgotten start is looked for
 
@@ -31,6 +33,7 @@ def validate(
     false_alarm: float = 0.001,
     columns: Mapping[str, str] | None = None,
     progress: Tick | None = None,
+    workers: int | None = None,
 ) -> Verdict:
     """A verdict on whether `data` behaves as the spec states.
 
@@ -46,18 +49,24 @@ def validate(
         For a table: where "path", "step" or "time", and each series are found, e.g. {"path": "run", "x": "value"}.
     progress : callable, optional
         Called with (rows done, rows in all).
+    workers : int, optional
+        Processes that read an ensemble's parts; None is what the size repays, up to the processors there are. The
+        verdict is the same for any number. A table, or an ensemble in memory, is read by this process.
 
     Raises
     ------
     ValueError
-        When the data cannot be read, or there is no spec to compare them with.
+        When the data cannot be read, or there is no spec to compare them with; EnsembleError, too, when a worker
+        process died.
     """
     from procgen.checks import source
 
     if not 0 < false_alarm < 1:
         raise ValueError(f"expected a false-alarm probability between 0 and 1, got {false_alarm}")
+    if workers is not None and (isinstance(workers, bool) or not isinstance(workers, int) or workers < 1):
+        raise ValueError(f"expected workers to be a whole number of at least 1, got {workers!r}")
     origin = source.origin(data, spec, columns)
-    gather = gathered(plan_of(origin.spec, origin.steps, origin.same_draws), origin.blocks(), progress, origin.rows)
+    gather = origin.gathered(workers, progress)
     rows = [*origin.checks(), *origin.faults, *judged(gather)]
     absent = getattr(origin, "absent", 0)
     if absent:  # rows that are missing are named once, not again as values that are not finite
@@ -71,17 +80,12 @@ def _only_absent(row: Check, gather: Gather, absent: int) -> bool:
     return row.what == "finite values" and gather.structure.not_finite.get(row.series, [0])[0] == absent
 
 
-def gathered(plan: Plan, blocks: Blocks, progress: Tick | None = None, rows: int = 0) -> Gather:
-    """The sums of one pass over blocks (first_path, first_step, {series: (paths, steps)})."""
-    gather = Gather(plan)
-    done = 0
-    for first_path, first_step, values in blocks:
-        gather.absorb(first_path, first_step, values)
-        if progress is not None:
-            done += values[plan.names[0]].size
-            progress(done, rows)
-    gather.finish()
-    return gather
+def gathered(plan: Plan, blocks: Blocks) -> Gather:
+    """The sums of one pass, in this process, over blocks that are the whole ensemble; they may be cut anywhere."""
+    listed = list(blocks)
+    first = min(path for path, _, _ in listed)
+    end = max(path + len(values[plan.names[0]]) for path, _, values in listed)
+    return in_one_process(plan, listed, Block(first, end - first, 0, plan.steps))
 
 
 def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Plan:
@@ -166,7 +170,7 @@ def _known(gather: Gather, series: SeriesPlan) -> Check:
     """A series without chance must be its mean."""
     if series.unknown:
         return Check(series.name, "values", "all steps", "level", outcome="untestable", note=series.unknown)
-    gap, seen, stated = gather.gaps.get(series.name, (0.0, math.nan, math.nan))
+    gap, _, _, seen, stated = gather.gaps.get(series.name, (0.0, 0, 0, math.nan, math.nan))
     scale = float(np.max(np.abs(series.mean)))
     room = series.grain / 2 + 1e-9 * max(scale, 1e-300)
     fault = "" if gap <= room else f"a value is {seen:.10g}, stated {stated:.10g}, without any chance in the spec"
@@ -185,10 +189,11 @@ def _shocks(gather: Gather, name: str) -> Iterator[Check]:
         yield from gather.errors[name].checks(name, series.highest)
         return
     sums = gather.shocks[name]
-    if way.stopped:
-        yield Check(name, "recovered shocks", "all steps", "law", outcome="untestable", note=way.stopped)
+    if name in gather.stopped:
+        note = gather.stopped[name]
+        yield Check(name, "recovered shocks", "all steps", "law", outcome="untestable", note=note)
         return
-    noise = gather.noise.get(name, 0.0)
+    noise = gather.plan.noise.get(name, 0.0)
     if sums.n and noise > 0.1 * math.sqrt(2 / sums.n):
         note = f"stored rounding moves the shocks by {math.sqrt(noise):.2g} of their sd, too much for {sums.n} of them"
         yield Check(name, "recovered shocks", "all steps", "law", outcome="untestable", note=note)

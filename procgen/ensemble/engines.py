@@ -1,8 +1,10 @@
-"""Who draws the chains: this process alone, or this process and worker processes beside it.
+"""Who works on the chains of an ensemble: this process alone, or this process and worker processes beside it.
 
-Workers are plain child processes that read tasks and write records as lines of JSON. So a caller's script
-needs no `if __name__ == "__main__"`, nothing is forked under running threads, and no pickle is read. The
-calling process draws too: while workers import (0.2 s) it is already at work.
+A task is data for JSON, and the work is a function named as "module:function", which takes a task and a tick and
+returns a list of records, data for JSON too: rendering draws a chain, validation sums one up. Workers are plain child
+processes that read tasks and write records as lines of JSON. So a caller's script needs no
+`if __name__ == "__main__"`, nothing is forked under running threads, and no pickle is read. The calling process works
+too: while workers import (0.2 s) it is already at it.
 """
 
 from __future__ import annotations
@@ -15,15 +17,16 @@ import subprocess
 import sys
 import threading
 from collections import deque
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from types import FrameType
 from typing import Any
 
 from procgen.ensemble.errors import EnsembleError, system_sentence
-from procgen.ensemble.part import Task, render_chain
+from procgen.ensemble.worker import function
 
-Progress = Callable[[int, int], None]  # (rows drawn so far, rows in all)
-WORTH = 4_000_000  # values that repay one more process
+Progress = Callable[[int, int], None]  # (rows done so far, rows in all)
+Records = list[dict[str, Any]]
+WORTH = 4_000_000  # values that repay one more process that draws
 
 
 def processors() -> int:
@@ -32,9 +35,9 @@ def processors() -> int:
     return len(affinity(0)) if affinity else os.cpu_count() or 1
 
 
-def default_workers(values: int) -> int:
-    """Processes worth starting for so many values."""
-    return max(1, min(processors(), values // WORTH)) if sys.executable else 1
+def default_workers(values: int, worth: int = WORTH) -> int:
+    """Processes worth starting for so many values, when `worth` of them repay one more."""
+    return max(1, min(processors(), values // worth)) if sys.executable else 1
 
 
 class Stopped(Exception):
@@ -44,13 +47,20 @@ class Stopped(Exception):
 class Crew:
     """The state that the calling process and its workers' threads share."""
 
-    def __init__(self, tasks: Sequence[Task], progress: Progress | None, done: int, rows: int):
+    def __init__(
+        self,
+        tasks: Sequence[Mapping[str, Any]],
+        keep: Callable[[Records], None],
+        progress: Progress | None,
+        done: int,
+        rows: int,
+    ):
         self.waiting = deque(tasks)
-        self.records: list[dict[str, Any]] = []
+        self._keep = keep
         self.error: BaseException | None = None
         self._progress, self._done, self._rows = progress, done, rows
         self._caller = threading.current_thread()
-        self._lock = threading.Lock()
+        self._lock, self._kept = threading.Lock(), threading.Lock()
 
     def tick(self, rows: int) -> None:
         """Count rows, in any thread; stops the work of the calling thread when another has failed."""
@@ -65,13 +75,13 @@ class Crew:
         if self._progress is not None:
             self._progress(self._done, self._rows)
 
-    def next(self) -> Task | None:
+    def next(self) -> Mapping[str, Any] | None:
         with self._lock:
             return self.waiting.popleft() if self.waiting and self.error is None else None
 
-    def keep(self, records: list[dict[str, Any]]) -> None:
-        with self._lock:
-            self.records += records
+    def keep(self, records: Records) -> None:
+        with self._kept:
+            self._keep(records)
 
     def fail(self, error: BaseException) -> None:
         self.error = self.error or error
@@ -99,33 +109,37 @@ class Crew:
 
 
 def run(
-    tasks: Sequence[Task],
+    tasks: Sequence[Mapping[str, Any]],
+    work: str,
+    keep: Callable[[Records], None],
     workers: int = 1,
     progress: Progress | None = None,
     done: int = 0,
     rows: int = 0,
     inherit: int | None = None,
-) -> list[dict[str, Any]]:
-    """Draw all tasks with `workers` processes, this one included; the records of their parts.
+    advice: str = "use fewer --workers",
+) -> None:
+    """Do `work` on all tasks with `workers` processes, this one included; `keep` takes the records of each.
 
-    `inherit` is a file descriptor that workers hold as long as they live. Raises EnsembleError of the first
-    chain that failed, or when a worker died; KeyboardInterrupt passes through after the workers have ended.
+    Tasks are begun in their order, and their records kept in the order in which they come, one call at a time.
+    `inherit` is a file descriptor that workers hold as long as they live. Raises EnsembleError of the first task that
+    failed, or when a worker died, with the `advice`; KeyboardInterrupt passes through after the workers have ended.
     """
-    crew = Crew(tasks, progress, done, rows)
+    crew = Crew(tasks, keep, progress, done, rows)
     with crew.interruptible():
-        _work(crew, min(workers, len(tasks)) - 1, inherit)
+        _work(crew, work, min(workers, len(tasks)) - 1, inherit, advice)
     if crew.error is not None:
         raise crew.error
-    return crew.records
 
 
-def _work(crew: Crew, helping: int, inherit: int | None) -> None:
+def _work(crew: Crew, work: str, helping: int, inherit: int | None, advice: str) -> None:
     helpers: list[Helper] = []
     try:
         for _ in range(helping):
-            helpers.append(Helper(crew, inherit))
+            helpers.append(Helper(crew, work, inherit, advice))
+        do = function(work)
         while (task := crew.next()) is not None:
-            crew.keep(render_chain(task, crew.tick))
+            crew.keep(do(task, crew.tick))
         while crew.error is None and any(helper.is_alive() for helper in helpers):
             for helper in helpers:
                 helper.join(0.05)
@@ -142,9 +156,9 @@ def _work(crew: Crew, helping: int, inherit: int | None) -> None:
 class Helper(threading.Thread):
     """Feeds one worker process with tasks, and takes its ticks, records and errors."""
 
-    def __init__(self, crew: Crew, inherit: int | None):
+    def __init__(self, crew: Crew, work: str, inherit: int | None, advice: str):
         super().__init__(daemon=True)
-        self.crew = crew
+        self.crew, self.work, self.advice = crew, work, advice
         self.process = subprocess.Popen(
             [sys.executable, "-P", "-c", "from procgen.ensemble.worker import main; main()"],
             stdin=subprocess.PIPE,
@@ -169,15 +183,15 @@ class Helper(threading.Thread):
         finally:
             self._close()
 
-    def _send(self, task: Task) -> None:
+    def _send(self, task: Mapping[str, Any]) -> None:
         assert self.process.stdin is not None
         try:
-            self.process.stdin.write(json.dumps(task.json()) + "\n")
+            self.process.stdin.write(json.dumps({"work": self.work, "task": task}) + "\n")
             self.process.stdin.flush()
         except OSError:
             pass  # it is dead, and `_receive` says so
 
-    def _receive(self) -> list[dict[str, Any]]:
+    def _receive(self) -> Records:
         assert self.process.stdout is not None
         for line in self.process.stdout:
             message = json.loads(line)
@@ -185,14 +199,13 @@ class Helper(threading.Thread):
                 self.crew.tick(message["rows"])
             elif "error" in message:
                 raise EnsembleError(message["error"])
+            elif "memory" in message:
+                raise EnsembleError(f"a worker process ran out of memory; {self.advice}")
             else:
                 return message["records"]
         code = self.process.wait()
         how = f"killed by signal {-code}" if code < 0 else f"exit code {code}"
-        raise EnsembleError(
-            f"a worker process died ({how}); signal 9 is often a lack of memory: "
-            "use fewer --workers, then go on with --resume"
-        )
+        raise EnsembleError(f"a worker process died ({how}); signal 9 is often a lack of memory: {self.advice}")
 
     def _close(self) -> None:
         assert self.process.stdin is not None

@@ -16,7 +16,7 @@ from procgen.ensemble.engines import Progress
 from procgen.ensemble.ensemble import Ensemble, Memory, OnDisk
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.manifest import Manifest, bytes_text
-from procgen.ensemble.part import Task, row_bytes
+from procgen.ensemble.part import WORK, Task, row_bytes
 from procgen.ensemble.plan import Block, Chain, batches, chains, narrow_steps
 from procgen.ensemble.present import Present
 from procgen.ensemble.source import FACTORY, Source, open_source, remember, revealable
@@ -202,7 +202,17 @@ class Job:
             if start < len(chain):
                 tasks.append(self._task(chain, start))
         done = sum(Block(**record["part"]).rows for record in records)
-        records += engines.run(tasks, workers, progress, done, self.whole.rows, descriptor)
+        engines.run(
+            [task.json() for task in tasks],
+            WORK,
+            records.extend,
+            workers,
+            progress,
+            done,
+            self.whole.rows,
+            descriptor,
+            "use fewer --workers, then go on with --resume",
+        )
         if self.factory == FACTORY:
             revealed.write(self.folder, self.spec, self.whole, self.identity)
         made = self._make_manifest(records)

@@ -219,9 +219,11 @@ def _flat(path: Path, table: pa.Table, name: str) -> np.ndarray:
     column = table.column(name)
     if column.null_count:
         raise EnsembleError(f"{path} is damaged: column {name} has missing values")
-    if pa.types.is_timestamp(column.type):
-        column = column.cast(pa.int64())
-    return column.to_numpy()
+    if column.num_chunks == 1:  # its memory as it is; `to_numpy` would import pandas for it
+        chunk = column.chunk(0)
+        kind = "<i8" if pa.types.is_timestamp(column.type) else np.dtype(column.type.to_pandas_dtype())
+        return np.frombuffer(chunk.buffers()[1], kind, len(chunk), chunk.offset * np.dtype(kind).itemsize)
+    return column.cast(pa.int64()).to_numpy() if pa.types.is_timestamp(column.type) else column.to_numpy()
 
 
 def pieces(here: range, part: Block) -> Iterator[Block]:

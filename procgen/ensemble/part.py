@@ -50,6 +50,14 @@ def row_bytes(columns: list[Column]) -> int:
     return 8 * len(columns)
 
 
+WORK = "procgen.ensemble.part:draw"
+
+
+def draw(task: Mapping[str, Any], tick: Tick) -> list[dict[str, Any]]:
+    """`render_chain` of a task as data."""
+    return render_chain(Task.read(task), tick)
+
+
 def render_chain(task: Task, tick: Tick = lambda rows: None) -> list[dict[str, Any]]:
     """Draw and write the parts of a chain from `task.start` on; their records for the manifest."""
     source = open_source(task.raw, task.reveal, task.factory)

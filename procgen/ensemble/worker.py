@@ -2,18 +2,26 @@
 
 from __future__ import annotations
 
+import importlib
 import json
 import os
 import signal
 import sys
 import threading
+from collections.abc import Callable
 from queue import SimpleQueue
 from types import FrameType
 from typing import Any
 
 
+def function(name: str) -> Callable[..., Any]:
+    """The function behind "module:function"."""
+    module, _, attribute = name.partition(":")
+    return getattr(importlib.import_module(module), attribute)
+
+
 class Worker:
-    """Draws chains until standard input ends; when that is because the parent died, at once."""
+    """Works on tasks until standard input ends; when that is because the parent died, it ends at once."""
 
     def __init__(self) -> None:
         self.answers, sys.stdout = sys.stdout, sys.stderr
@@ -25,7 +33,7 @@ class Worker:
     def work(self) -> None:
         threading.Thread(target=self._listen, daemon=True).start()
         while (line := self.tasks.get()) is not None:
-            self._draw(line)
+            self._do(**json.loads(line))
             self.busy.clear()
 
     def stop(self, number: int, frame: FrameType | None) -> None:
@@ -43,16 +51,15 @@ class Worker:
             raise SystemExit(128 + signal.SIGTERM)
         self._say(rows=rows)
 
-    def _draw(self, line: str) -> None:
+    def _do(self, work: str, task: dict[str, Any]) -> None:
         from procgen.ensemble.errors import EnsembleError
-        from procgen.ensemble.part import Task, render_chain
 
         try:
-            self._say(records=render_chain(Task.read(json.loads(line)), self._tick))
+            self._say(records=function(work)(task, self._tick))
         except EnsembleError as error:
             self._say(error=str(error))
         except MemoryError:
-            self._say(error="a worker process ran out of memory; use fewer --workers, then go on with --resume")
+            self._say(memory="")
 
     def _listen(self) -> None:
         rest = b""

@@ -10,7 +10,7 @@ from procgen.checks.errors import ErrorLane, ErrorSums
 
 
 def summed(z, tiles=(1000,)):
-    sums, lane, at = ErrorSums(), ErrorLane.start(z.shape[1]), 0
+    sums, lane, at = ErrorSums(), ErrorLane(z.shape[1]), 0
     while at < len(z):
         size = tiles[at % len(tiles)]
         sums.absorb(z[at : at + size], lane)

@@ -17,7 +17,7 @@ SCORES = {law: Scores(law) for law in (NORMAL, STUDENT)}
 
 
 def summed(z, law=NORMAL, tiles=(10_000,)):
-    sums, lane, at = ShockSums(SCORES[law], len(z)), ShockLane.start(z.shape[1]), 0
+    sums, lane, at = ShockSums(SCORES[law], len(z)), ShockLane(z.shape[1]), 0
     while at < len(z):
         size = tiles[at % len(tiles)]
         sums.absorb(z[at : at + size], at, lane)
@@ -52,7 +52,7 @@ def test_a_seasonal_profile_is_found_at_its_phase():
     moved = z + 0.15 * np.cos(2 * np.pi * np.arange(240) / 12)[:, None]
     found = []
     for values in (z, moved):
-        sums, lane = ShockSums(SCORES[NORMAL], 240, period=12), ShockLane.start(50)
+        sums, lane = ShockSums(SCORES[NORMAL], 240, period=12), ShockLane(50)
         sums.absorb(values, 0, lane)
         sums.finish(lane)
         found.append(checks_of(sums))
@@ -61,13 +61,22 @@ def test_a_seasonal_profile_is_found_at_its_phase():
     assert found[1][name].log_p < found[1]["shocks: level by step sum over steps"].log_p < math.log(1e-6)
 
 
-def test_unknown_first_steps_and_broken_paths_are_left_out():
+def test_unknown_first_steps_and_single_gaps_are_left_out():
     z = np.random.default_rng(3).standard_normal((100, 6))
     spoiled = np.vstack([np.full((3, 6), np.nan), z])
     spoiled[50, 2] = np.nan
-    whole = np.delete(z, 2, axis=1)
-    assert summed(spoiled).n == whole.size
-    assert checks_of(summed(spoiled))["shocks: variance all steps"].estimate == pytest.approx(whole.var(ddof=1))
+    whole, tiled = summed(spoiled), summed(spoiled, tiles=(2, 30, 19))
+    z[47, 2] = np.nan
+    known = z[np.isfinite(z)]
+    for sums in (whole, tiled):
+        assert sums.n == known.size == 599
+        assert checks_of(sums)["shocks: variance all steps"].estimate == pytest.approx(known.var(ddof=1))
+        for i, lag in enumerate(sums.lags):  # both of a pair must be known
+            products = z[lag:] * z[:-lag]
+            assert sums.memory[0, i] == np.count_nonzero(np.isfinite(products))
+            assert sums.memory[1, i] == pytest.approx(np.nansum(products))
+        assert sums.neighbours == pytest.approx(np.nansum(z[:, 1:] * z[:, :-1]))
+        assert sums.rows == {6: 99, 2: 1, 3: 1}
 
 
 @pytest.mark.parametrize(("law", "shape"), [(NORMAL, (60, 25)), (STUDENT, (100, 20))])
@@ -108,8 +117,10 @@ def test_correlation_between_series_is_calibrated_and_found():
         a = rng.standard_normal((30, 20))
         b = 0.4 * a + math.sqrt(1 - 0.16) * rng.standard_normal((30, 20))
         sums = CrossSums()
-        carry = sums.absorb(a[:11], b[:11], None)
-        sums.absorb(a[11:], b[11:], carry)
+        totals = sums.lane(20)
+        sums.absorb(a[:11], b[:11], 11, 0, totals)
+        sums.absorb(a, b, 19, -11, totals)
+        sums.finish(totals)
         checks = {c.probe: c for c in cross_checks("x ~ y", sums, {0: 0.4})}
         p.append([checks[probe].log_p for probe in ("same step", "lag +1", "lag -2")])
     for column in np.array(p).T:

@@ -20,7 +20,7 @@ def test_sums_are_those_of_a_loop_however_the_steps_are_cut():
     x = np.random.default_rng(1).standard_normal((60, 8))
     q = x**2 - 3
     for cuts in ([60], [1, 2, 30, 27]):
-        sums, lane, step = SquareSums(plan), SquareLane.start(8), 0
+        sums, lane, step = SquareSums(plan), SquareLane(8), 0
         for rows in cuts:
             sums.absorb(x[step : step + rows], step, lane)
             step += rows

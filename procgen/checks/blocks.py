@@ -1,0 +1,121 @@
+"""Sums in an order that only the addresses of the values decide: the same bits however the data are cut.
+
+Along a path, steps are added one by one in blocks of 64 that begin at multiples of 64; across paths, neighbours are
+added first, so that the sum over 32 paths is that over the first 16 plus that over the last 16. Hence the shape of a
+tile does not show. What is not finite is left out.
+"""
+
+from __future__ import annotations
+
+import threading
+from collections.abc import Sequence
+
+import numpy as np
+from numpy.typing import NDArray
+
+BLOCK = 64  # steps
+GROUP = 16  # paths: a lane group of the ensemble, the finest cut between two parts
+_local = threading.local()
+
+
+def scratch(steps: int, paths: int, number: int = 0) -> NDArray:
+    """An array to compute in, the same memory at each call of a thread: fresh memory costs more than the sums."""
+    kept: dict[int, NDArray] = _local.__dict__.setdefault("kept", {})
+    size = steps * paths
+    if number not in kept or kept[number].size < size:
+        kept[number] = np.empty(size)
+    return kept[number][:size].reshape(steps, paths)
+
+
+def across(x: NDArray) -> NDArray:
+    """Sum over the last axis, neighbours first."""
+    while x.shape[-1] > 1:
+        if x.shape[-1] % 2:
+            x = np.concatenate([x, np.zeros((*x.shape[:-1], 1), x.dtype)], axis=-1)
+        x = x[..., 0::2] + x[..., 1::2]
+    return x[..., 0]
+
+
+def add_products(total: NDArray, a: NDArray, b: NDArray | None = None, offset: int = 0) -> int:
+    """Add a·b (or a), summed over the steps of each path, to `total` (paths,); how many were known.
+
+    `a` and `b` (steps, paths) begin `offset` steps after a multiple of 64.
+    """
+    factors = (a,) if b is None else (a, b)
+    new = _summed(total, factors, offset)
+    count = a.size
+    if not np.isfinite(new).all():
+        known = np.isfinite(a) if b is None else np.isfinite(a) & np.isfinite(b)
+        new = _summed(total, [np.where(known, x, 0.0) for x in factors], offset)
+        count = int(np.count_nonzero(known))
+    total[...] = new
+    return count
+
+
+def _summed(total: NDArray, factors: Sequence[NDArray], offset: int) -> NDArray:
+    steps, paths = factors[0].shape
+    head = min(-offset % BLOCK, steps)
+    middle = head + (steps - head) // BLOCK * BLOCK
+    for start, end in ((0, head), (head, middle), (middle, steps)):
+        if start < end:
+            height = min(end - start, BLOCK)
+            sums = _block_sums([x[start:end].reshape(-1, height, paths) for x in factors])
+            if len(sums) > 4:
+                total = np.add.accumulate(np.concatenate([total[None], sums]), axis=0)[-1]
+            else:
+                for one in sums:
+                    total = total + one
+    return total
+
+
+def _block_sums(factors: Sequence[NDArray]) -> NDArray:
+    """(blocks, paths): sums over the steps of each block, (blocks, steps, paths), one step after another.
+
+    The library adds whole rows in turn, whatever their width. Less than a lane group is the same few paths however
+    the ensemble is cut; its columns are long and go one by one.
+    """
+    paths = factors[0].shape[2]
+    both = len(factors) > 1
+    if paths >= GROUP - 1:  # or the pairs of neighbours in one
+        return np.einsum("btp,btp->bp" if both else "btp->bp", *factors)
+    columns = [np.einsum("bt,bt->b" if both else "bt->b", *(x[:, :, k] for x in factors)) for k in range(paths)]
+    return np.stack(columns, axis=1)
+
+
+class Window:
+    """The last rows of something that comes tile by tile, and the newest tile behind them, in one array."""
+
+    def __init__(self, reach: int, paths: int):
+        self.reach, self.held = reach, 0
+        self._rows, self._end = np.empty((0, paths)), 0
+
+    def push(self, rows: NDArray) -> NDArray:
+        """The held rows followed by the new ones; a view that lives until the next push."""
+        count = len(rows)
+        if self._end + count > len(self._rows):
+            self._make_room(count)
+        self._rows[self._end : self._end + count] = rows
+        view = self._rows[self._end - self.held : self._end + count]
+        self._end += count
+        self.held = min(self.reach, self.held + count)
+        return view
+
+    def _make_room(self, count: int) -> None:
+        size = self.reach + max(2 * count, 2 * BLOCK, self.reach)
+        rows = self._rows if len(self._rows) >= size else np.empty((size, self._rows.shape[1]))
+        rows[: self.held] = self._rows[self._end - self.held : self._end].copy()
+        self._rows, self._end = rows, self.held
+
+
+def add_lagged(
+    total: NDArray, later: NDArray, earlier: NDArray, lag: int, steps: int, offset: int = 0
+) -> int:
+    """`add_products` of later[t] · earlier[t − lag] for the last `steps` steps of two windows' views.
+
+    Both views end at the same step. Steps whose partner is not there are left out.
+    """
+    count = min(steps, len(later), len(earlier) - lag)
+    if count <= 0:
+        return 0
+    end = len(earlier) - lag
+    return add_products(total, later[len(later) - count :], earlier[end - count : end], offset + steps - count)

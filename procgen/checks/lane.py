@@ -1,0 +1,219 @@
+"""One pass over the data: blocks of values in, sums out. Memory follows the widest block, not the ensemble.
+
+Blocks come as (first_path, first_step, {series: (paths, steps)}); the blocks of one range of paths come in the order
+of their steps. A lane carries everything that a range of paths needs from one block to the next. Which paths share a
+lane, and where its tiles begin, does not show in the sums.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator, Mapping
+from itertools import chain
+
+import numpy as np
+from numpy.typing import NDArray
+
+from procgen.checks.blocks import BLOCK, Window, add_products, scratch
+from procgen.checks.gather import Gather, Plan
+from procgen.checks.probes import SeriesPlan
+from procgen.checks.rectangles import Blocks, Values, first_values
+from procgen.checks.tree import Tree, ranges
+from procgen.ensemble.plan import Block
+
+TILE = 1 << 16  # values of one series in a tile: half of a second-level cache
+
+Tick = Callable[[int], None]  # rows just summed; may raise to stop the work
+Progress = Callable[[int, int], None]  # rows done, rows in all
+
+
+class Lane:
+    """What is carried for one range of paths until its last step."""
+
+    def __init__(self, plan: Plan, first_path: int, paths: int):
+        self.plan, self.first_path, self.paths, self.step = plan, first_path, paths, 0
+        self.sums = Gather(plan)
+        self.height = max(TILE // paths // BLOCK, 1) * BLOCK
+        self.rest: dict[str, NDArray] = {}  # steps behind the last multiple of 64
+        self.probes = np.full((paths, plan.offset[-1]), np.nan)
+        self.pools = [_PoolLane(p, paths) if p.pool else None for p in plan.series]
+        self.prints = np.zeros((len(plan.series), paths), dtype=np.uint64)
+        self.carriers = {name: way.start(first_path, paths) for name, way in self.sums.routes.items()}
+        self.shocks = {name: sums.lane(paths) for name, sums in self.sums.shocks.items()}
+        self.errors = {name: sums.lane(paths) for name, sums in self.sums.errors.items()}
+        self.squares = {name: sums.lane(paths) for name, sums in self.sums.squares.items()}
+        self.cross = {pair: sums.lane(paths) for pair, sums in self.sums.cross.items()}
+
+    def absorb(self, values: Mapping[str, NDArray], tick: Tick) -> None:
+        """Add the next steps of all series, (paths, steps)."""
+        held = len(next(iter(self.rest.values()))) if self.rest else 0
+        steps = values[self.plan.names[0]].shape[1]
+        whole = held + steps
+        if self.step + whole < self.plan.steps:
+            whole -= whole % BLOCK
+        at, rest, self.rest = -held, self.rest, {}
+        while at < whole - held:
+            count = min(self.height, whole - held - at)
+            for column, name in enumerate(self.plan.names):
+                self._series(column, _tile(rest.get(name), values[name], at, count))
+            self._pairs(count)
+            self.step += count
+            at += count
+            tick(count * self.paths)
+        if at < steps:
+            self.rest = {name: _tile(rest.get(name), values[name], at, steps - at).copy() for name in self.plan.names}
+
+    def _series(self, column: int, x: NDArray) -> None:
+        plan, sums = self.plan.series[column], self.sums
+        if not sums.structure.absorb(column, x, self.first_path, self.step, self.prints[column]):
+            x = np.where(np.isfinite(x), x, np.nan)  # named there; from here on the path is left out
+        for i in np.flatnonzero((plan.steps >= self.step) & (plan.steps < self.step + len(x))):
+            self.probes[:, self.plan.offset[column] + i] = x[plan.steps[i] - self.step]
+        pool = self.pools[column]
+        if pool is not None:
+            pool.absorb(x, self.step)
+        if plan.name in sums.squares:
+            sums.squares[plan.name].absorb(x, self.step, self.squares[plan.name])
+        if not self.plan.precision[column].random:
+            self._compare(plan, x)
+        route = sums.routes.get(plan.name)
+        if route is not None:
+            z, self.carriers[plan.name] = route.tile(x, self.carriers[plan.name], self.first_path, self.step)
+            if route.stopped:
+                sums.stopped[plan.name] = route.stopped
+            if plan.name in sums.shocks:
+                sums.shocks[plan.name].absorb(z, self.step, self.shocks[plan.name])
+            else:
+                sums.errors[plan.name].absorb(z, self.errors[plan.name])
+
+    def _compare(self, plan: SeriesPlan, x: NDArray) -> None:
+        """A series without chance is its mean, exactly (but for rounding)."""
+        mean = plan.theory.mean(np.arange(self.step, self.step + len(x)))
+        if mean is not None:
+            with np.errstate(invalid="ignore"):
+                gap = np.nan_to_num(np.abs(x - mean[:, None]), nan=-1.0, posinf=np.inf)
+            row, path = np.unravel_index(int(np.argmax(gap)), gap.shape)
+            place = -self.step - int(row), -self.first_path - int(path)
+            found = (float(gap[row, path]), *place, float(x[row, path]), float(mean[row]))
+            self.sums.gaps[plan.name] = max(self.sums.gaps.get(plan.name, found), found)
+
+    def _pairs(self, steps: int) -> None:
+        for pair, sums in self.sums.cross.items():
+            a, b = (self.shocks[name].view for name in pair)
+            sums.absorb(a, b, steps, self.plan.shock_pairs[pair].ready - self.step, self.cross[pair])
+
+    def finish(self) -> Gather:
+        """The sums, after the last step."""
+        pools = [np.zeros((0, 0)) if pool is None else pool.averages() for pool in self.pools]
+        self.sums.finish_lane(self.first_path, self.probes, pools, self.prints.T.copy())
+        for kind in ("shocks", "errors", "squares", "cross"):
+            for key, sums in getattr(self.sums, kind).items():
+                sums.finish(getattr(self, kind)[key])
+        return self.sums
+
+
+def _tile(rest: NDArray | None, values: NDArray, at: int, count: int) -> NDArray:
+    """(steps, paths) from step `at` of `values` (paths, steps) on; the steps before step 0 are the rest."""
+    tile = np.empty((count, values.shape[0]))
+    old = max(-at, 0)
+    if old and rest is not None:
+        tile[: min(old, count)] = rest[len(rest) - old :][:count]
+    tile[old:] = values[:, max(at, 0) : at + count].T
+    return tile
+
+
+class _PoolLane:
+    """Averages over a window of steps along each path."""
+
+    def __init__(self, series: SeriesPlan, paths: int):
+        assert series.pool is not None
+        self.pool = series.pool
+        self.window = Window(max(self.pool.lags), paths)
+        self.sums = np.zeros((1 + len(self.pool.lags), paths))
+        self.unknown = np.zeros(paths, dtype=bool)
+
+    def absorb(self, x: NDArray, step: int) -> None:
+        pool = self.pool
+        start, end = max(pool.first - step, 0), min(pool.last - step, len(x))
+        if start >= end:
+            return
+        at = step + start - pool.first  # place of the first new row in the window
+        mean = pool.mean[at : at + end - start, None]
+        rows = np.subtract(x[start:end], mean, out=scratch(end - start, x.shape[1], 1))
+        self.unknown |= ~np.isfinite(rows).all(axis=0)
+        add_products(self.sums[0], rows, None, start)
+        both = self.window.push(rows)
+        for k, lag in enumerate(pool.lags):
+            count = min(end - start, len(both) - lag)
+            if count <= 0:
+                continue
+            new, earlier = both[len(both) - count :], both[len(both) - lag - count : len(both) - lag]
+            if pool.slope is not None and lag:
+                slope = pool.slope[k, at + end - start - count : at + end - start, None]
+                new = np.subtract(new, slope * earlier, out=scratch(count, x.shape[1], 1))
+            add_products(self.sums[1 + k], new, earlier, end - count)
+
+    def averages(self) -> NDArray:
+        """(paths, 1 + lags): what is averaged along each path, minus its theory."""
+        pool = self.pool
+        width = pool.last - pool.first
+        sums = np.where(self.unknown, np.nan, self.sums)
+        for k, lag in enumerate(pool.lags):
+            if pool.slope is None or not lag:
+                sums[1 + k] -= pool.covariance[k, lag:].sum()
+        return (sums / np.array([width] + [width - lag for lag in pool.lags])[:, None]).T
+
+
+class Pass:
+    """One pass: `absorb` blocks, then ask for the `tree` of sums; paths that never reach the last step are left out."""
+
+    def __init__(self, plan: Plan, tick: Tick = lambda rows: None):
+        self.plan, self.tick = plan, tick
+        self.lanes: dict[int, Lane] = {}
+        self.tree: Tree[Gather] = Tree()
+
+    def absorb(self, first_path: int, first_step: int, values: Mapping[str, NDArray]) -> None:
+        """Add a block. Raises ValueError when it does not follow the last one of its paths."""
+        for first, end in ranges(first_path, first_path + len(values[self.plan.names[0]])):
+            lane = self._lane(first, end - first, first_step)
+            lane.absorb({n: values[n][first - first_path : end - first_path] for n in self.plan.names}, self.tick)
+            if lane.step >= self.plan.steps:
+                self.tree.add(first, end, self.lanes.pop(first).finish())
+
+    def _lane(self, first_path: int, paths: int, first_step: int) -> Lane:
+        lane = self.lanes.get(first_path)
+        if lane is None and first_step == 0:
+            lane = self.lanes[first_path] = Lane(self.plan, first_path, paths)
+        held = len(next(iter(lane.rest.values()))) if lane and lane.rest else 0
+        if lane is None or lane.step + held != first_step or lane.paths != paths:
+            raise ValueError(
+                f"expected the blocks of a range of paths in the order of their steps, got step {first_step} of "
+                f"paths {first_path}–{first_path + paths - 1} out of turn"
+            )
+        return lane
+
+    def total(self) -> Gather:
+        return self.tree.total(Gather(self.plan))
+
+
+def in_one_process(plan: Plan, blocks: Blocks, whole: Block, progress: Progress | None = None) -> Gather:
+    """The sums of one pass in this process; `whole` is the range that the blocks fill."""
+    done = 0
+
+    def tick(rows: int) -> None:
+        nonlocal done
+        done += rows
+        if progress is not None:
+            progress(done, whole.rows)
+
+    one, seen = Pass(plan, tick), iter(blocks)
+    first: list[tuple[int, int, Values]] = []
+    plan.look(first_values(_noted(seen, first), whole), whole.first_path)
+    for first_path, first_step, values in chain(first, seen):
+        one.absorb(first_path, first_step, values)
+    return one.total()
+
+
+def _noted(blocks: Iterator[tuple[int, int, Values]], book: list[tuple[int, int, Values]]) -> Blocks:
+    for block in blocks:
+        book.append(block)
+        yield block

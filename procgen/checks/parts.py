@@ -1,0 +1,160 @@
+"""The parts of an ensemble on disk, gathered in this process or in others: one range of paths is one task.
+
+A task and its record are data for JSON, so that any engine can send them. A chain of parts, cut along the steps, is
+gathered in order by one process, since the shocks of a step need what came before it.
+"""
+
+from __future__ import annotations
+
+import base64
+import contextlib
+import io
+import json
+import threading
+from collections.abc import Callable, Iterator, Mapping
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from procgen.checks.gather import Gather, Plan
+from procgen.checks.lane import Pass
+from procgen.checks.rectangles import Blocks, Values, first_values, grouped, named
+from procgen.ensemble import digest
+from procgen.ensemble.columns import as_float
+from procgen.ensemble.ensemble import OnDisk, open_ensemble
+from procgen.ensemble.errors import EnsembleError
+from procgen.ensemble.manifest import node
+from procgen.ensemble.plan import Block
+
+WORK = "procgen.checks.parts:gather_chain"
+
+Tick = Callable[[int], None]
+
+
+def tasks(ensemble: OnDisk, spec: Any, columns: Mapping[str, str], same_draws: bool) -> list[dict[str, Any]]:
+    """One task for each range of paths, in order; `columns` are the series of `spec` and where they stand."""
+    out = str(ensemble.path.absolute())
+    shared = {"out": out, "manifest": ensemble.digest, "raw": spec.raw, "columns": dict(columns)}
+    shared["same_draws"] = same_draws
+    chains: dict[tuple[int, int], list[int]] = {}
+    for number, part in enumerate(ensemble.manifest.parts):
+        chains.setdefault((part.block.first_path, part.block.end_path), []).append(number)
+    return [{"shared": shared, "parts": numbers} for numbers in chains.values()]
+
+
+def gather_chain(task: Mapping[str, Any], tick: Tick) -> list[dict[str, Any]]:
+    """The record of one task: sums by range of paths, digest nodes by part, and what could not be read."""
+    ensemble, plan = _context(task["shared"])
+    chain = _Chain(ensemble, task["shared"]["columns"], task["parts"])
+    one = Pass(plan, tick)
+    for first_path, first_step, values in chain.blocks():
+        one.absorb(first_path, first_step, values)
+    sums = [[first, end, *_packed(some)] for first, (end, some) in one.tree.nodes.items()]
+    return [{"sums": sums, "nodes": chain.nodes, "faults": chain.faults}]
+
+
+def unpacked(plan: Plan, facts: Mapping[str, Any], text: str) -> Gather:
+    """Sums from a record."""
+    with np.load(io.BytesIO(base64.b64decode(text)), allow_pickle=False) as arrays:
+        return Gather(plan).restore(facts, dict(arrays))
+
+
+def _packed(sums: Gather) -> tuple[dict[str, Any], str]:
+    facts, arrays = sums.state()
+    file = io.BytesIO()
+    np.savez(file, **arrays)  # type: ignore[arg-type]
+    return facts, base64.b64encode(file.getvalue()).decode()
+
+
+_CONTEXTS: dict[str, tuple[OnDisk, Plan]] = {}
+_making = threading.Lock()
+
+
+def plan_for(task: Mapping[str, Any]) -> Plan:
+    """The plan of a task; the last one is kept, and each process derives it for itself."""
+    return _context(task["shared"])[1]
+
+
+def _context(shared: Mapping[str, Any]) -> tuple[OnDisk, Plan]:
+    with _making:
+        key = json.dumps(shared)
+        if key not in _CONTEXTS:
+            _CONTEXTS.clear()
+            _CONTEXTS[key] = _made(shared)
+        return _CONTEXTS[key]
+
+
+def _made(shared: Mapping[str, Any]) -> tuple[OnDisk, Plan]:
+    from procgen.checks.validate import plan_of
+    from procgen.ensemble.source import read_spec
+
+    ensemble = open_ensemble(shared["out"])
+    if ensemble.digest != shared["manifest"]:
+        raise EnsembleError(f"{shared['out']} was drawn again while it was being read; validate it again")
+    plan = plan_of(read_spec(shared["raw"]), ensemble.whole.steps, shared["same_draws"])
+    with contextlib.suppress(EnsembleError):  # what cannot be read is named when its part is gathered
+        plan.look(first_values(named(ensemble.blocks(), shared["columns"]), ensemble.whole), ensemble.whole.first_path)
+    return ensemble, plan
+
+
+class _Chain:
+    """Reads the parts of one range of paths; their digests are made on the way."""
+
+    def __init__(self, ensemble: OnDisk, columns: Mapping[str, str], numbers: list[int]):
+        self.ensemble, self.columns = ensemble, columns
+        self.parts = {number: ensemble.manifest.parts[number] for number in numbers}
+        self.nodes: list[tuple[int, dict[str, str]]] = []  # number of a part, packed nodes by column
+        self.faults: list[tuple[str, str]] = []  # where, and what
+
+    def blocks(self) -> Iterator[tuple[int, int, Values]]:
+        """Blocks of whole lane groups; where a part cannot be read it ends, with a fault."""
+        part = next(iter(self.parts.values()))
+        pieces = self.ensemble.stored(part.block.first_path, part.block.end_path)
+        try:
+            for number, part in self.parts.items():
+                blocks = self._pieces(number, part.block, pieces)
+                # Parts that follow each other must be cut at the same paths, hence each is handed on whole.
+                yield from grouped(blocks, part.block) if len(self.parts) == 1 else [_whole(blocks, part.block)]
+            next(pieces, None)  # what comes after the last row is looked at, too
+        except EnsembleError as error:
+            self.faults.append((str(part.block), str(error)))
+
+    def _pieces(self, number: int, part: Block, pieces: Iterator[Any]) -> Iterator[tuple[int, int, Values]]:
+        leaves = {name: digest.Leaves(part) for name in self.ensemble.names}
+        left = part.rows
+        while left:
+            block, values = next(pieces)
+            left -= block.rows
+            numbers = {name: as_float(values[name]) for name in leaves}
+            for name, leaf in leaves.items():
+                leaf.add(block.first_path, block.first_step, numbers[name])
+            yield block.first_path, block.first_step, {name: numbers[column] for name, column in self.columns.items()}
+        whole = self.ensemble.manifest.whole
+        self.nodes.append((number, {name: digest.pack(leaf.nodes(whole)) for name, leaf in leaves.items()}))
+
+
+def _whole(blocks: Blocks, part: Block) -> tuple[int, int, Values]:
+    out: dict[str, NDArray] = {}
+    for first_path, first_step, values in blocks:
+        for name, numbers in values.items():
+            path, step = first_path - part.first_path, first_step - part.first_step
+            rows = out.setdefault(name, np.empty((part.paths, part.steps)))
+            rows[path : path + len(numbers), step : step + numbers.shape[1]] = numbers
+    return part.first_path, part.first_step, out
+
+
+def is_whole(ensemble: OnDisk, nodes: Mapping[int, Mapping[str, str]]) -> bool:
+    """Whether the digests of all values are those that the manifest records; nodes packed, by part and column."""
+    manifest = ensemble.manifest
+    if len(nodes) < len(manifest.parts) or any(node(nodes[k]) != part.node for k, part in enumerate(manifest.parts)):
+        return False
+    roots = {**manifest.stored, **manifest.revealed}
+    return all(
+        digest.root(
+            [(p.block, digest.unpack(nodes[k][name], p.block, manifest.whole)) for k, p in enumerate(manifest.parts)],
+            manifest.whole,
+        )
+        == recorded
+        for name, recorded in roots.items()
+    )
