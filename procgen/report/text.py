@@ -44,7 +44,7 @@ def verdict_text(verdict: Verdict, rows: int = 8) -> str:
     covered = list(coverage.lines(verdict.coverage))
     if covered:
         lines += ["", "What was judged:"]
-        lines += [f"  {line}" for line in covered]
+        lines += [f"  {line}" for text in covered for line in _hung(text)]
     seen = list(_detectable(verdict.rows))
     if seen:
         lines += ["", "Smallest departures that would have been found 9 times in 10:"]
@@ -52,7 +52,7 @@ def verdict_text(verdict: Verdict, rows: int = 8) -> str:
     left = list(_not_judged(verdict.rows))
     if left:
         lines += ["", "Checks that were not judged:"]
-        lines += [f"  {line}" for line in left]
+        lines += [f"  {line}" for text in left for line in _hung(text)]
     return "\n".join([*lines, "", *_wrapped(CAUTION)])
 
 
@@ -109,24 +109,40 @@ _IN_WORDS = {
     "prediction errors: mean": "a shift of all one-step errors by {} of their sd",
     "prediction errors: variance": "a variance of one-step errors off by a factor of 1 ± {}",
     "prediction errors: autocorrelation": "a correlation of {} between one-step errors",
-    "mean": "a mean off by {}",
-    "variance": "a variance off by {}",
-    "covariance": "a covariance off by {}",
+    "mean over steps": "a mean off by {} at all steps",
+    "variance over steps": "a variance off by {} at all steps",
+    "autocovariance over steps": "an autocovariance off by {} at all steps",
+    "slope over steps": "a slope on earlier steps off by {}",
+    "slope of squares": "a slope of squares on earlier ones off by {}",
+    "mean": "a mean off by {} at one step",
+    "variance": "a variance off by {} at one step",
+    "covariance": "a covariance off by {} at one pair of steps",
+    "covariance between series": "a covariance off by {} at one pair of steps",
+    "slope between series": "a slope of one on the other off by {} at one pair of steps",
 }
 
 
 def _detectable(rows: Sequence[Check]) -> Iterator[str]:
-    """For each series the sharpest detectable size of each sort, in words."""
+    """For the series, the sharpest detectable size of each sort, in words; series of the same sizes share a line."""
     found: dict[str, dict[str, float]] = {}
     for row in rows:
-        if row.what in _IN_WORDS and row.detectable is not None:
+        if row.what in _IN_WORDS and row.detectable is not None and math.isfinite(row.detectable):
             mine = found.setdefault(row.series, {})
             mine[row.what] = min(mine.get(row.what, math.inf), row.detectable)
-    for series, sizes in found.items():
+    lines: dict[str, list[str]] = {}
+    for series, sizes in sorted(found.items(), key=lambda item: " ~ " in item[0]):
         sharp = {what: size for what, size in sizes.items() if what.startswith(("shocks", "prediction"))}
         sizes = sharp or sizes
-        text = "; ".join(_IN_WORDS[what].format(number(size, 2)) for what, size in sizes.items())
-        yield f"{series}: {text}"
+        text = "; ".join(words.format(number(sizes[what], 2)) for what, words in _IN_WORDS.items() if what in sizes)
+        lines.setdefault(text, []).append(series)
+    for text, series_of in lines.items():
+        yield from _hung(f"{', '.join(series_of)}: {text}")
+
+
+def _hung(text: str) -> list[str]:
+    """A long line in several, the later ones set in."""
+    first, *rest = _wrapped(text) or [""]
+    return [first, *("  " + line for line in (_wrapped(" ".join(rest), 98) if rest else ()))]
 
 
 def _not_judged(rows: Sequence[Check]) -> Iterator[str]:

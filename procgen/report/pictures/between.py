@@ -18,8 +18,7 @@ from procgen.report.pictures.subject import Subject, texts
 CROSS_LAGS = 12
 MOST_PAIRS = 6
 MATRIX = 24  # series of a matrix
-NAMED = 6  # series up to which its rows have names, and
-WRITTEN = 8  # up to which its cells have numbers
+WRITTEN = 8  # series up to which its cells have numbers, and its caption names
 
 
 def between(subjects: Sequence[Subject], theory: Any, suspects: Sequence[tuple[str, str]] = ()) -> Iterator[Chart]:
@@ -114,24 +113,23 @@ def _matrix(subjects: Sequence[Subject], pairs: Sequence[_Pair]) -> Chart:
                 corners[name].append((column + 0.04, column + 0.96, n - 1 - row + 0.04, n - 1 - row + 0.96))
                 strength[name].append(abs(value))
                 if n <= WRITTEN:
-                    text = f"{value:.2f}".replace("-", "−")
+                    text = f"{round(value, 2) + 0.0:.2f}".replace("-", "−")
                     notes.append(Note(column + 0.5, n - 1 - row + 0.5, text, "middle"))
         if both[0] is not None and np.isfinite(both[1]):
             gaps.append(abs(both[0] - both[1]))
         rows.append((pair.a.name, pair.b.name, *(row[0] for row in texts([np.nan if both[0] is None else both[0]])),
                      *(row[0] for row in texts([both[1]]))))  # fmt: skip
-    labels = [short(s.name, 10) for s in subjects]
     cells = [
         Cells(np.array(corners[name]), name, label, np.array(strength[name]))
         for name, label in (("stated", "stated, above the diagonal"), ("seen", "seen, below it"))
         if corners[name]
     ]
-    x = Axis(0.0, float(n), tuple((i + 0.5, t if n <= NAMED else str(i + 1)) for i, t in enumerate(labels)))
-    y = Axis(0.0, float(n), tuple((n - 0.5 - i, t if n <= NAMED else str(i + 1)) for i, t in enumerate(labels)))
-    numbered = "" if n <= NAMED else " Series are numbered in the order of the spec."
-    says = (
-        f"; the furthest seen from stated is off by {max(gaps):.2g}" if gaps else "; what they should be is not known"
-    )
-    caption = f"Correlations at the same step{says}.{numbered}"
-    head = ("first", "second", "stated", "seen")
-    return Chart("Correlations between series", caption, x, y, [*cells, *notes], head, rows)
+    numbers = range(1, n + 1, 1 if n <= WRITTEN else 2)
+    x = Axis(0.0, float(n), tuple((k - 0.5, str(k)) for k in numbers))
+    y = Axis(0.0, float(n), tuple((n + 0.5 - k, str(k)) for k in numbers))
+    says = f"the furthest seen from stated is off by {max(gaps):.2g}" if gaps else "what they should be is not known"
+    named = ", ".join(f"{k} {s.name}" for k, s in enumerate(subjects, start=1)) if n <= WRITTEN else "as in the spec"
+    caption = f"Correlations at the same step; {says}. Series by number: {named}."
+    head, high = ("first", "second", "stated", "seen"), max(28.0, 8.0 + 2.0 * n)
+    title = "Correlations between series"
+    return Chart(title, caption, x, y, [*cells, *notes], head, rows, grid=False, high=high)

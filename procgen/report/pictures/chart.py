@@ -102,7 +102,7 @@ class Chart:
     caption : what there is to see, in a sentence
     marks : drawn in their order
     head, rows : the numbers behind it, as a table
-    zero : whether the line y = 0 is drawn
+    zero, grid : whether the line y = 0 is drawn, and lines at the ticks of y
     high : its height, 48 being its width
     """
 
@@ -114,6 +114,7 @@ class Chart:
     head: tuple[str, ...] = ()
     rows: Sequence[Sequence[str]] = field(default_factory=tuple)
     zero: bool = False
+    grid: bool = True
     high: float = 28.0
 
     @property

@@ -64,7 +64,8 @@ def _drawn(axes: Any, heading: str, chart: Chart) -> None:
         axes.axhline(0.0, color=LIGHT["soft"], linewidth=0.8)
     for side in ("top", "right", "left"):
         axes.spines[side].set_visible(False)
-    axes.grid(axis="y", color=LIGHT["grid"], linewidth=0.7)
+    if chart.grid:
+        axes.grid(axis="y", color=LIGHT["grid"], linewidth=0.7)
     axes.set_axisbelow(True)
     axes.set_title(_plain(f"{heading}: {chart.title}"), fontsize=9, fontweight="bold", loc="left")
     label = f"{chart.x.label}\n" if chart.x.label else ""

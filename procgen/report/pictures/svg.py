@@ -135,7 +135,7 @@ def _drawn(chart: Chart, name: str) -> Iterator[str]:
 
 def _axes(chart: Chart, frame: _Frame) -> Iterator[str]:
     lines = [f"M{LEFT} {y:.0f}H{RIGHT}" for y in frame.y([v for v, text in chart.y.ticks if text])]
-    if lines:
+    if lines and chart.grid:
         yield f'<path class="grid" d="{"".join(lines)}"/>'
     for value, text in chart.y.ticks:
         yield f'<text x="{LEFT - 60}" y="{frame.y(value) + 42:.0f}" text-anchor="end">{escaped(text)}</text>'
