@@ -16,6 +16,7 @@ import numpy as np
 
 from procgen.theory.arma import cross_covariance
 from procgen.theory.processes import Process, Steps
+from procgen.theory.recursion import recursed
 from procgen.theory.unknown import Unknown
 
 FORGOTTEN = 1e-17
@@ -37,6 +38,14 @@ class StationaryGaussian(Process):
     def covariance(self, t: Steps, s: Steps) -> np.ndarray:
         return self.autocovariance(np.abs(np.asarray(t) - np.asarray(s)))
 
+    def spectral_density(self, frequencies: np.ndarray) -> np.ndarray:
+        """Two-sided, per cycle, at frequencies in cycles a step."""
+        return self.autocovariance.spectral_density(frequencies)
+
+    def weights(self, count: int) -> np.ndarray:
+        """What the shocks 0, 1, .. count - 1 steps ago add, in units of the series."""
+        return self.autocovariance.weights(count)
+
     def marginal(self, step: int) -> Any:
         from scipy.stats import norm
 
@@ -47,7 +56,8 @@ class FractionalNoise:
     """Autocovariance of (1 - B)^-d of white noise of a variance: gamma(k) = gamma(k - 1) (k - 1 + d) / (k - d)."""
 
     def __init__(self, d: float, variance: float = 1.0):
-        self.d, self.variance = d, variance * math.exp(math.lgamma(1.0 - 2.0 * d) - 2.0 * math.lgamma(1.0 - d))
+        self.d, self.shock_variance = d, variance
+        self.variance = variance * math.exp(math.lgamma(1.0 - 2.0 * d) - 2.0 * math.lgamma(1.0 - d))
 
     @cached_property
     def _near(self) -> np.ndarray:
@@ -70,6 +80,16 @@ class FractionalNoise:
             total = total - 2.0 * at / (n * (n - 1) * k ** (n - 1))
         return total
 
+    def spectral_density(self, frequencies: np.ndarray) -> np.ndarray:
+        """variance of the shocks (2 sin pi f)^-2d (Hosking 1981, theorem 1)."""
+        _refuse_pole(frequencies, self.d)
+        return self.shock_variance * (2.0 * np.sin(np.pi * np.abs(frequencies))) ** (-2.0 * self.d)
+
+    def weights(self, count: int) -> np.ndarray:
+        """psi(j) = psi(j - 1) (j - 1 + d) / j, times the standard deviation of the shocks."""
+        j = np.arange(1.0, count)
+        return math.sqrt(self.shock_variance) * np.concatenate([[1.0], np.cumprod((j - 1.0 + self.d) / j)])
+
 
 class GaussianNoise:
     """Autocovariance of fractional Gaussian noise: variance (|k + 1|^2H - 2 |k|^2H + |k - 1|^2H) / 2."""
@@ -87,6 +107,25 @@ class GaussianNoise:
             series = series + term * far ** (power - n)
             term = term * (power - n) * (power - n - 1) / ((n + 1) * (n + 2))
         return self.variance * np.where(lags > SMOOTH, series, near)
+
+    def spectral_density(self, frequencies: np.ndarray) -> np.ndarray:
+        """variance Gamma(2H + 1) sin(pi H) 2 (1 - cos w) times the sum over j of abs(w + 2 pi j)^(-2H - 1), w = 2 pi f.
+
+        Sinai (1976), Theory Probab. Appl. 21, 64-80; the sum as two Hurwitz zeta functions.
+        """
+        from scipy.special import gamma, zeta
+
+        _refuse_pole(frequencies, self.hurst - 0.5)
+        f, power = np.abs(np.asarray(frequencies, float)), 2.0 * self.hurst + 1.0
+        if self.hurst == 0.5:
+            return np.full(f.shape, self.variance)
+        scale = self.variance * gamma(power) * math.sin(math.pi * self.hurst) * (2.0 * np.pi) ** -power
+        apart = np.where(f > 0.0, f, 0.5)
+        total = 4.0 * np.sin(np.pi * f) ** 2 * (zeta(power, apart) + zeta(power, 1.0 - f))
+        return np.where(f > 0.0, scale * total, 0.0)
+
+    def weights(self, count: int) -> np.ndarray:
+        raise Unknown("the weights of fractional Gaussian noise on its shocks have no closed form")
 
 
 class Filtered:
@@ -121,3 +160,16 @@ class Filtered:
             for k in distinct.tolist()
         ]
         return np.array(values)[which].reshape(np.shape(lags))
+
+    def spectral_density(self, frequencies: np.ndarray) -> np.ndarray:
+        z = np.exp(-2j * np.pi * np.asarray(frequencies, float))
+        response = np.polyval([*self.theta[::-1], 1.0], z) / np.polyval([*(-c for c in self.phi[::-1]), 1.0], z)
+        return np.abs(response) ** 2 * self.noise.spectral_density(frequencies)
+
+    def weights(self, count: int) -> np.ndarray:
+        return recursed(self.phi, np.convolve([1.0, *self.theta], self.noise.weights(count))[:count])
+
+
+def _refuse_pole(frequencies: np.ndarray, d: float) -> None:
+    if d > 0.0 and np.any(np.asarray(frequencies) == 0.0):
+        raise Unknown("it has a long memory: the sum of its autocovariances, its spectral density at 0, is infinite")

@@ -13,13 +13,14 @@ there are, for others the best linear ones.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
 
 from procgen.theory.arma import PowerSeries
 from procgen.theory.expression import Expression
+from procgen.theory.linear import At
 from procgen.theory.sources import PROCESS, Source
 from procgen.theory.unknown import Unknown
 from procgen.theory.wold import Ratio, ratios, wold
@@ -40,7 +41,9 @@ class Forecast:
 
 def variance_given_parts(x: Expression, horizons: np.ndarray) -> np.ndarray:
     """Variance of the forecast error at horizons >= 1, all past shocks of every source given."""
-    last = _last(x, horizons)
+    last, own = _last(x, horizons), _long_memory(x)
+    if own:
+        return np.cumsum(own(last) ** 2)[horizons - 1]
     psi: dict[Source, np.ndarray] = {}
     for source, ratio in ratios(x.linear):
         psi[source] = psi.get(source, 0.0) + _series(ratio).upto(last)
@@ -53,7 +56,9 @@ def variance_given_parts(x: Expression, horizons: np.ndarray) -> np.ndarray:
 
 def variance_given_values(x: Expression, horizons: np.ndarray) -> np.ndarray:
     """Variance of the forecast error at horizons >= 1, all past values of the series itself given."""
-    last = _last(x, horizons)
+    last, own = _last(x, horizons), _long_memory(x)
+    if own:
+        return np.cumsum(own(last) ** 2)[horizons - 1]
     if not x.linear:
         return np.zeros(horizons.shape)
     variance, ratio = wold(x.space, x.linear)
@@ -104,9 +109,19 @@ def _series(ratio: Ratio) -> PowerSeries:
 
 def _last(x: Expression, horizons: np.ndarray) -> int:
     """The farthest horizon, for a series whose forecasts have variances in closed form."""
-    if x.terms or any(source.kind == PROCESS for source in x.sources):
+    if x.terms or (any(source.kind == PROCESS for source in x.sources) and not _long_memory(x)):
         raise Unknown("it is no sum of linear recursions of white noise: its forecasts have no variance in closed form")
     last = int(np.max(horizons, initial=1))
     if last > FARTHEST:
         raise Unknown(f"forecasts are computed up to {FARTHEST} steps ahead")
     return last
+
+
+def _long_memory(x: Expression) -> Callable[[int], np.ndarray] | None:
+    """The weights on its shocks of a series that is one process with such weights, as a function of their number."""
+    if len(x.linear) != 1:
+        return None
+    ((key, c),) = x.linear.items()
+    if not isinstance(key, At) or key.delay or not hasattr(key.base.source.detail, "weights"):
+        return None
+    return lambda count: c * key.base.source.detail.weights(count)

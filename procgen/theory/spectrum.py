@@ -27,8 +27,10 @@ LONGEST, LONGEST_BENT = 1 << 20, 1 << 15  # lags that are added up; fewer where 
 def spectral_density(x: Expression, frequencies: np.ndarray) -> np.ndarray:
     """S at frequencies in cycles a step."""
     frequencies = np.asarray(frequencies, float)
-    if is_filtered(x):
-        return _of_filters(x.space, x.linear, frequencies)
+    own = [source for source in x.linear.sources if hasattr(source.detail, "spectral_density")]
+    if _stands_apart(x, own):
+        rest = _of_filters(x.space, x.linear.only(s for s in x.linear.sources if s not in own), frequencies)
+        return rest + sum(_of_process(x.linear.only([source]), source, frequencies) for source in own)
     gamma = remembered(x)
     lags = np.arange(1, len(gamma))
     each = [gamma[0] + 2.0 * gamma[1:] @ np.cos(2.0 * np.pi * f * lags) for f in frequencies.ravel()]
@@ -82,6 +84,21 @@ def _reach(x: Expression) -> int:
     forms = [x.linear, *(form for term in x.terms for form in (*term.factors, term.exponent))]
     keys = [key for form in forms for key in form if isinstance(key, At)]
     return max((max(key.delay, len(key.base.phi)) for key in keys), default=0)
+
+
+def _stands_apart(x: Expression, own: list[Source]) -> bool:
+    """Whether a series is a sum of stationary filters and of these independent processes, which have densities."""
+    rest = [source for source in x.sources if source not in own]
+    plain = all(isinstance(key, At) and not key.base.started for key in x.linear)
+    alone = not any(x.space.dependent(p, q) for p in own for q in (*rest, *own) if p is not q)
+    return plain and alone and not x.terms and not any(source.kind == PROCESS for source in rest)
+
+
+def _of_process(form: Linear, source: Source, frequencies: np.ndarray) -> np.ndarray:
+    """What a process adds through its delays."""
+    z = np.exp(-2j * np.pi * frequencies)
+    response = sum(c * z**key.delay for key, c in form.items() if isinstance(key, At))
+    return np.abs(response) ** 2 * source.detail.spectral_density(frequencies)
 
 
 def _of_filters(space: Space, form: Linear, frequencies: np.ndarray) -> np.ndarray:

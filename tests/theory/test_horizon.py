@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+import mpmath
 import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy.linalg import solve_discrete_are
+from scipy.signal import lfilter
 from statsmodels.tsa.statespace.sarimax import SARIMAX
 from statsmodels.tsa.statespace.structural import UnobservedComponents
 
@@ -193,6 +195,16 @@ def test_a_difference_a_delay_and_a_sum_of_noises():
     two = series_of({"white_noise": {"sd": 3}, "as": "a"}, {"white_noise": {"sd": 4}, "as": "b"})
     np.testing.assert_allclose(two.forecast_variance([1, 7]), [25, 25], rtol=1e-12)
     assert series_of({"constant": 5}).forecast_variance([1, 3]).tolist() == [0.0, 0.0]
+
+
+def test_a_long_memory_is_told_by_its_weights():
+    """psi(j) = Gamma(j + d) / (Gamma(d) Gamma(j + 1)) (Hosking 1981), by mpmath; then through its filter."""
+    d, n = 0.3, int(H[-1])
+    psi = [float(mpmath.gamma(j + d) / mpmath.gamma(d) / mpmath.gamma(j + 1)) for j in range(n)]
+    filtered = lfilter([1.0, 0.4], [1.0, -0.5], psi)
+    x = series_of({"arfima": {"d": d, "phi": 0.5, "theta": 0.4, "sd": 2}})
+    np.testing.assert_allclose(x.forecast_variance(H), 4 * np.cumsum(filtered**2)[H - 1], rtol=1e-11)
+    np.testing.assert_array_equal(x.forecast_variance(H), x.forecast_variance(H, given="parts"))
 
 
 def test_far_ahead_it_is_the_variance():

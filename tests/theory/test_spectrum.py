@@ -90,6 +90,36 @@ def test_what_is_not_linear_is_added_up():
     assert chain.long_run_variance == pytest.approx(p * (1 - p) * (1 + r) / (1 - r), rel=1e-12)
 
 
+@pytest.mark.parametrize(
+    "body",
+    [
+        {"arfima": {"d": 0.3, "phi": 0.5, "theta": 0.2, "sd": 2}},
+        {"arfima": {"d": -0.3, "sd": 2}},
+        {"fractional_gaussian_noise": {"hurst": 0.8, "sd": 2}},
+        {"fractional_gaussian_noise": {"hurst": 0.3, "sd": 2}},
+    ],
+    ids=str,
+)
+def test_a_long_memory_against_its_autocovariances(body):
+    """Herglotz: gamma(h) is the integral of S(f) cos(2 pi f h) (Brockwell & Davis 1991, 4.3.1), by mpmath."""
+    x = series_of(body, {"white_noise": {"sd": 0.5}})
+    for lag in (0, 1, 7):
+
+        def share(f, lag=lag):
+            return float(x.spectral_density([float(f)])[0]) * mpmath.cos(2 * mpmath.pi * f * lag)
+
+        whole = 2 * mpmath.quad(share, [0, 1e-9, 1e-6, 1e-3, 0.05, 0.2, 0.5], maxdegree=5)
+        assert float(whole) == pytest.approx(float(x.autocovariance([lag])[0]), abs=2e-4 * float(x.variance(0)))
+
+
+def test_the_long_run_variance_of_a_long_memory():
+    """Infinite above d = 0, 0 below, and white at H = 1/2 (Beran 1994, ch. 2)."""
+    long = series_of({"arfima": {"d": 0.2, "sd": 1}})
+    assert long.long_run_variance is None and "a long memory" in long.reason("long_run_variance")
+    assert series_of({"arfima": {"d": -0.2, "sd": 1}}).long_run_variance == 0.0
+    assert series_of({"fractional_gaussian_noise": {"hurst": 0.5, "sd": 3}}).long_run_variance == 9.0
+
+
 def test_reasons_and_refusals():
     whole = theory_of(
         {
