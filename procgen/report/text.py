@@ -159,4 +159,4 @@ def _not_judged(rows: Sequence[Check]) -> Iterator[str]:
 def _wrapped(text: str, width: int = 100) -> list[str]:
     from textwrap import wrap
 
-    return wrap(text, width)
+    return wrap(text, width, break_on_hyphens=False, break_long_words=False)
