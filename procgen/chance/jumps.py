@@ -38,13 +38,11 @@ class Jumps:
 
         lump: the chance of the value without shock and jumps (0 beside a shock); cdf counts it from that value on.
         """
-        from scipy.optimize import brentq
-
         lumps = [part for part in self.parts if part[2] == 0.0]
         rest = Normals(tuple(part for part in self.parts if part[2] > 0.0)).distribution()
         shift, variance = self.shift, self.spread**2 + self.rate * (self.mean**2 + self.sd**2)
         level = self.shift + self.rate * self.mean
-        mean, var = level, variance
+        mean, var, far = level, variance, 60.0 * np.sqrt(variance)
         if start:
             once = np.expm1(self.mean + self.sd**2 / 2)
             twice = np.expm1(2 * self.mean + 2 * self.sd**2)
@@ -70,16 +68,19 @@ class Jumps:
                 return rest.pdf(self._inner(x)) / (np.asarray(x, float) if start else 1.0)
 
             def ppf(self, p):
-                far = 60.0 * np.sqrt(variance) + 1e-300
-
-                def one(q):
-                    if not 0.0 < q < 1.0:
-                        return -np.inf if q <= 0.0 else np.inf
-                    y = brentq(lambda y: float(rest.cdf(y) + self.lump * (y >= shift)) - q, level - far, level + far)
-                    return y
-
-                y = np.vectorize(one, otypes=[float])(p)
+                p = np.asarray(p, float)
+                low, high = (np.full(p.shape, level + side * far) for side in (-1.0, 1.0))
+                for _ in range(200):
+                    middle = (low + high) / 2.0
+                    enough = rest.cdf(middle) + self.lump * (middle >= shift) >= p
+                    low, high = np.where(enough, low, middle), np.where(enough, middle, high)
+                    if np.all(high - low <= 1e-13 * np.maximum(np.abs(high), 1e-3 * far)):
+                        break
+                y = np.where(p <= 0.0, -np.inf, np.where(p >= 1.0, np.inf, high))
                 return start * np.exp(y) if start else y
+
+            def isf(self, p):
+                return self.ppf(1.0 - np.asarray(p, float))
 
             def mean(self):
                 return float(mean)

@@ -7,7 +7,7 @@ from collections.abc import Iterator
 
 import numpy as np
 
-from procgen.checks import judge
+from procgen.checks import judge, special
 from procgen.checks.gather import Gather
 from procgen.checks.judge import FEW_PATHS, Finding, Sample
 from procgen.checks.probes import CrossPlan, Pool, SeriesPlan
@@ -166,6 +166,9 @@ def _laws(gather: Gather, column: int) -> Iterator[Check]:
         if len(values) < 8:
             continue
         law = plan.scores[i].distribution
+        if getattr(law.frozen, "spacing", 0.0):
+            yield from special.whole_numbers(plan.name, _at(plan, i), law.frozen, values[:, k], i)
+            continue
         z = (values[:, k] - law.mean) / law.sd
         if plan.grain > 0.02 * law.sd / math.sqrt(len(values)):
             z = z + plan.grain / law.sd * (np.random.default_rng(i).random(len(z)) - 0.5)

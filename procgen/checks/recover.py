@@ -5,6 +5,7 @@ Also: what the recovered shocks of two series must have in common.
 
 from __future__ import annotations
 
+import zlib
 from collections import OrderedDict
 from dataclasses import dataclass, field, replace
 from typing import Any
@@ -51,6 +52,7 @@ class Route:
     grain: float
     kalman: Kalman | None = None
     source: Any = None
+    ranked: float | None = None  # the grain, which ranks take in exactly, where ranks given the past stand for shocks
     stopped: str = ""  # why a tile could not be undone
     _means: OrderedDict[tuple[int, int], NDArray] = field(default_factory=OrderedDict, repr=False)
 
@@ -58,23 +60,36 @@ class Route:
         """A carrier for `paths` paths from `first_path` on, before step 0."""
         if self.kalman is not None:
             return self.kalman.start(paths)
+        from procgen.checks.special import ranked
         from procgen.checks.undo import undone
 
+        if self.ranked is not None:
+            return ranked(self.graph, self.series, self.theory, self.ranked)
         return undone(self.graph, self.series, self.theory, first_path, paths)
 
     def tile(self, x: NDArray, carrier: Any, first_path: int, first_step: int) -> tuple[NDArray, Any]:
         """Standardised shocks (steps, paths) of the next tile of values, and the carrier after it."""
+        if self.ranked is not None and carrier is not None:
+            v = dither(first_path, x.shape[1], first_step, x.shape[0], self.series) + 0.5
+            with np.errstate(all="ignore"):
+                z = carrier.tile(x, v)
+            return self._taken(z, x, carrier)
         if self.grain:
-            x = x + self.grain * dither(first_path, x.shape[1], first_step, x.shape[0])
+            x = x + self.grain * dither(first_path, x.shape[1], first_step, x.shape[0], self.series)
         if self.kalman is not None:
             return self.kalman.innovations(x - self._mean(first_step, len(x)), carrier, first_step)
         if carrier is not None:
             with np.errstate(all="ignore"):
                 z = carrier.tile(x)
-            if isinstance(z, np.ndarray):
-                return z, carrier
-            self.stopped = z.reason
-        return np.full(x.shape, np.nan), None  # what could not be undone once is not taken up again
+            return self._taken(z, x, carrier)
+        return np.full(x.shape, np.nan), None
+
+    def _taken(self, z: Any, x: NDArray, carrier: Any) -> tuple[NDArray, Any]:
+        """What came out of a carrier; what could not be undone once is not taken up again."""
+        if isinstance(z, np.ndarray):
+            return z, carrier
+        self.stopped = z.reason
+        return np.full(x.shape, np.nan), None
 
     def allow(self, noise: float) -> None:
         """Rounding adds the variance `noise` to a shock: so far it may carry one beyond the ends of its law."""
@@ -103,11 +118,15 @@ class Route:
         return self._means[key]
 
 
-def dither(first_path: int, paths: int, first_step: int, steps: int) -> NDArray:
-    """Numbers in (-1/2, 1/2), a fixed function of path and step: they spread rounded values over their cells."""
+def dither(first_path: int, paths: int, first_step: int, steps: int, series: str = "") -> NDArray:
+    """Numbers in (-1/2, 1/2), a fixed function of series, path and step: they spread values over their cells.
+
+    Series must not share them: what is spread alike would look correlated.
+    """
     step = np.arange(first_step, first_step + steps, dtype=np.uint64)[:, None]
     path = np.arange(first_path, first_path + paths, dtype=np.uint64)[None, :]
     x = step * np.uint64(0x9E3779B97F4A7C15) + path * np.uint64(0xD1B54A32D192ED03)
+    x += np.uint64(zlib.crc32(series.encode()) * 0x8CB92BA72F3D8DD7 % 2**64)
     for shift, factor in ((30, 0xBF58476D1CE4E5B9), (27, 0x94D049BB133111EB)):
         x ^= x >> np.uint64(shift)
         x *= np.uint64(factor)
@@ -120,7 +139,10 @@ def route(name: str, theory: Any, graph: Any, grain: float, same_draws: bool = T
 
     `same_draws`: whether path p of the data has the drawn parameters of path p of the spec.
     """
+    from procgen.chance.laws import LAWS
+    from procgen.checks.special import ranked
     from procgen.terms.base import Unknown
+    from procgen.terms.ranks import Ranking
     from procgen.terms.recover import recovery
 
     if not same_draws and getattr(theory, "mixture", None) is not None:
@@ -134,7 +156,11 @@ def route(name: str, theory: Any, graph: Any, grain: float, same_draws: bool = T
     if size <= (LARGEST_STATE if not undone else SMALL_STATE):
         return _by_filter(name, theory, graph, grain, system)
     if isinstance(undone, Unknown):
-        return _by_projection(name, theory, graph, grain, undone.reason)
+        ranks = ranked(graph, name, theory, grain)
+        if isinstance(ranks, Ranking):
+            words = f"ranks of {name} given its past"
+            return Route(name, Scores(LAWS["uniform"]()), words, theory, graph, 0.0, ranked=grain)
+        return _by_projection(name, theory, graph, grain, undone.reason if ranks is None else ranks.reason)
     words = f"recovered by undoing {name} down to {undone.source.name}"
     return Route(name, Scores(undone.source.law), words, theory, graph, grain, source=undone.source)
 
@@ -188,6 +214,8 @@ def expected(a: Route, b: Route, space: Any) -> Expected:
         return Expected(unknown="a source of theirs is not known to theory")
     if not any(space.dependent(x, y) for x in left for y in right):
         return Expected()
+    if a.ranked is not None or b.ranked is not None:
+        return Expected(unknown="what the ranks of two dependent series have in common is not computed")
     if a.kalman is None and b.kalman is None:
         return Expected({0: space.normal_correlation(left[0], right[0])})
     if a.kalman is not None and b.kalman is not None:
@@ -198,7 +226,7 @@ def expected(a: Route, b: Route, space: Any) -> Expected:
 
 
 def _sources(r: Route, space: Any) -> list[Any] | None:
-    if r.kalman is None:
+    if r.kalman is None and r.ranked is None:
         return [space.sources[r.source.name]] if r.source.name in space.sources else None
     return list(r.theory.expression.sources)
 

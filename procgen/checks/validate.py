@@ -16,6 +16,7 @@ from procgen.checks.judge_shocks import cross_checks, shock_checks
 from procgen.checks.lane import in_one_process
 from procgen.checks.probes import PAIR_LIMIT, SeriesPlan, plan_cross, plan_series
 from procgen.checks.recover import Cannot, Expected, Route, expected, route
+from procgen.checks.special import lumpy
 from procgen.checks.squares import plan_squares
 from procgen.checks.structure import Precision
 from procgen.checks.verdict import Check, Verdict
@@ -104,7 +105,7 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
         series.append(plan)
         routes[name] = way
         random = th[name].random
-        precision.append(Precision(name, declared.type, declared.decimals, random, th[name].discrete))
+        precision.append(Precision(name, declared.type, declared.decimals, random, lumpy(th[name])))
     ways = [way for way in routes.values() if isinstance(way, Route) and way.scores is not None]
     pairs = {(a.series, b.series): expected(a, b, th.axis.space) for a, b in list(combinations(ways, 2))[:PAIR_LIMIT]}
     blind = [name for name, way in routes.items() if isinstance(way, Cannot) or way.scores is None]
@@ -219,7 +220,7 @@ def _none_recovered(way: Route, gather: Gather) -> str:
 
 def _chance_of_equal(series: SeriesPlan, plan: Plan) -> float:
     """Probability that two paths of a series are equal by rounding; 0 where values are not rounded."""
-    if series.theory.discrete:
+    if lumpy(series.theory):
         return 1.0
     if not np.isfinite(series.variance).all():
         return 0.0

@@ -23,6 +23,7 @@ from procgen.spec.declare import LawOf, Parameter, Real
 
 Array = np.ndarray
 State = dict[str, Array]
+Cell = tuple[Array, Array]
 Issue = tuple[str, str]  # the parameter's name, and what is wrong with it in a sentence
 
 
@@ -159,13 +160,17 @@ class Term:
         """The one unknown input (None in `known`) from the values; NaN where the unknown past matters."""
         return Unknown(f"{self.kind} cannot be inverted")
 
-    def rank(self, values: Array, known: Sequence[Array | None], v: Array, state: State | None, at: Array):
-        """Uniforms of the values given what came before them, and the state after them; for checks.
+    def unranked(self) -> str:
+        """Why `rank` has no answer; empty when it has."""
+        return f"the law of {self.kind} given its past is not computed"
 
-        P(X < x) + v·P(X = x) under the law of a value X given its past: independent and uniform for independent
-        uniforms v (Rosenblatt 1952; Brockwell 2007 for values with a chance of their own). NaN where it is not known.
+    def rank(self, values: Array, cell: Cell, known: Sequence[Array | None], state: State | None, at: Array):
+        """P(X ≤ lower) and P(X ≤ upper) for the values X given their past, and the state after them; for checks.
+
+        The cell (lower, upper] holds what is stored as the value. Needed only where ``unranked`` is empty; all inputs
+        but the term's own draws are known then.
         """
-        return Unknown(f"the values of {self.kind} have no ranks given their past that are computed")
+        return Unknown(self.unranked())
 
     def ahead(self, steps: Array, state: State, *inputs: Ahead) -> Ahead | Unknown:
         """Mean and variance at the coming `steps`, given the state just before the first of them."""

@@ -115,6 +115,17 @@ class Flag(Term):
             out[0] = on
         return out, {"on": switch(z[first:], out[first:], on, _below(enter), _below(stay))[None, :]}
 
+    def unranked(self):
+        return "what is on by dates has no chance in it" if self.spans else ""
+
+    def rank(self, values, cell, known, state, at):
+        enter, stay = self.chances
+        first = np.full((1, values.shape[1]), np.nan) if state is None else state["on"]
+        before = np.concatenate([first, values[:-1]])
+        off = 1.0 - np.where(np.isnan(before), self.share, enter + (stay - enter) * np.nan_to_num(before))
+        lower, upper = (np.where(edge >= 1.0, 1.0, np.where(edge >= 0.0, off, 0.0)) for edge in cell)
+        return (lower, upper), {"on": values[-1:]}
+
     def ahead(self, steps, state, *inputs):
         if self.spans:
             mean = self.on(steps)[:, None]

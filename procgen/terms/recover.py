@@ -49,7 +49,7 @@ class Recovery:
         self._states: list[Any] = [None] * len(chain)
         self._step = 0
         beside = [part for node, i in chain for k, part in enumerate(node.inputs) if k != i]
-        self._known = _Known(graph, beside) if beside else None
+        self._known = KnownParts(graph, beside) if beside else None
         self.paths = paths
 
     def tile(self, values: Array) -> Array | Unknown:
@@ -66,7 +66,7 @@ class Recovery:
         return values
 
 
-class _Known(Run):
+class KnownParts(Run):
     """The deterministic parts beside the random one, which are the same on every path."""
 
     def __init__(self, graph: Graph, parts: list[Node]):

@@ -213,7 +213,8 @@ class Axis(Volatile, Stating):
         key = f"process {len(self._processes)} of {process.name}"
         source = Source(key, PROCESS, np.nan, detail=process, depends=depends)
         self._processes.append(source)
-        return Expression(self.space, mean or known.constant(0.0), Linear({At(self._base(source, (), False), 0): 1.0}))
+        form = Linear({At(self._base(source, (), False), 0): 1.0})
+        return Expression(self.space, mean or known.constant(0.0), form, lumpy=process.lumpy or process.discrete)
 
     def product(self, expressions: Sequence[Expression]) -> Expression:
         """The product of series."""

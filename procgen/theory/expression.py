@@ -9,8 +9,9 @@ opaque source, whose moments are unknown for a reason, but whose stationarity is
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from itertools import count
+from typing import Any
 
 import numpy as np
 
@@ -37,6 +38,8 @@ class Expression:
     linear: Linear = field(default_factory=Linear)
     terms: Mapping[Term, float] = field(default_factory=dict)
     outputs: Mapping[str, Callable[[], Expression]] = field(default_factory=dict)
+    law: Callable[[int], Any] | None = None  # the law at a step, where what it is made of does not tell
+    lumpy: bool = False  # whether some of its values have a chance of their own, as 0 of a demand that is intermittent
 
     # algebra
 
@@ -44,7 +47,8 @@ class Expression:
         terms = _collect([*self.terms.items(), *other.terms.items()])
         if len(terms) > MOST_TERMS:
             return opaque(self.space, (self, other), f"a sum of more than {MOST_TERMS} products")
-        return Expression(self.space, self.mean_path + other.mean_path, self.linear + other.linear, terms)
+        lumpy = (self.lumpy or other.lumpy) and all(x.lumpy or not x.sources for x in (self, other))
+        return Expression(self.space, self.mean_path + other.mean_path, self.linear + other.linear, terms, lumpy=lumpy)
 
     def __mul__(self, factor: float) -> Expression:
         return Expression(
@@ -53,6 +57,7 @@ class Expression:
             self.linear.scaled(factor),
             {term: factor * c for term, c in self.terms.items()} if factor else {},
             self.outputs,
+            lumpy=self.lumpy,
         )
 
     __rmul__ = __mul__
@@ -60,7 +65,7 @@ class Expression:
     def lag(self, by: int) -> Expression:
         """The series `by` steps ago."""
         terms = [(t, c * k) for term, c in self.terms.items() for t, k in term.lag(by)]
-        return Expression(self.space, self.mean_path.lag(by), self.linear.lag(by), _collect(terms))
+        return Expression(self.space, self.mean_path.lag(by), self.linear.lag(by), _collect(terms), lumpy=self.lumpy)
 
     def difference(self, lag: int = 1, order: int = 1) -> Expression:
         """(1 - B^lag)^order of the series."""
@@ -79,7 +84,7 @@ class Expression:
         for key in linear:
             if isinstance(key, Sum):
                 self.space.origins.setdefault(key, name)
-        return Expression(self.space, self.mean_path.integrate(start, name), linear, _collect(terms))
+        return Expression(self.space, self.mean_path.integrate(start, name), linear, _collect(terms), lumpy=self.lumpy)
 
     def _integrate_seasons(self, start: float, every: int) -> Expression:
         if self.terms or self.mean_path.value != 0.0:
@@ -156,7 +161,7 @@ def product(space: Space, expressions: Sequence[Expression]) -> Expression:
             whole = [(_times(a, b), c * k) for a, c in whole for b, k in parts]
         except Unknown as unknown:
             return opaque(space, expressions, unknown.reason)
-    return _sorted_out(space, whole)
+    return replace(_sorted_out(space, whole), lumpy=any(x.lumpy for x in expressions))
 
 
 def opaque(space: Space, ingredients: Sequence[Expression], reason: str, mean: Known | None = None) -> Expression:
@@ -167,7 +172,8 @@ def opaque(space: Space, ingredients: Sequence[Expression], reason: str, mean: K
         f"opaque {next(_serial)}", OPAQUE, np.nan, detail=tuple(ingredients), depends=depends, reason=reason,
         centred=mean is not None,
     )  # fmt: skip
-    return Expression(space, mean or known.constant(0.0), Linear({At(Base(source), 0): 1.0}))
+    lumpy = any(x.lumpy for x in ingredients)
+    return Expression(space, mean or known.constant(0.0), Linear({At(Base(source), 0): 1.0}), lumpy=lumpy)
 
 
 def _times(a: Term, b: Term) -> Term:

@@ -25,6 +25,8 @@ def marginal(x: Expression, step: int) -> Any:
     at = np.array([step], np.int64)
     from scipy import stats
 
+    if x.law is not None:
+        return x.law(step)
     if is_gaussian(x):
         variance = float(x.covariance(x, at, at)[0])
         if variance <= 0.0:
@@ -60,6 +62,11 @@ class Affine:
 
     def __init__(self, law: Any, location: float, scale: float):
         self.law, self.location, self.scale = law, location, scale
+
+    @property
+    def spacing(self) -> float:
+        """The distance of neighbouring values where only such have a chance, else 0."""
+        return abs(self.scale) * getattr(self.law, "spacing", 0.0)
 
     def _z(self, x):
         return (np.asarray(x, float) - self.location) / self.scale

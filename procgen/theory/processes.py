@@ -26,7 +26,8 @@ AT_ONCE = 1 << 14
 class Process:
     """One process: what it is made of (`ingredients`, expressions), its moments, and what verdicts it adds."""
 
-    discrete = False  # whether it takes few values
+    discrete = False  # whether it takes few values, or whole numbers
+    lumpy = False  # whether some of its values have a chance of their own
     gaussian = False  # whether its values at any steps are jointly Gaussian
 
     def __init__(self, name: str, ingredients: tuple[Any, ...], says: tuple[tuple[str, str], ...] = ()):
@@ -87,7 +88,7 @@ class Held(Process):
 
     def __init__(self, name: str, body: Any, step_of: Callable[[Steps], Steps], says: tuple[tuple[str, str], ...]):
         super().__init__(name, (body,), says)
-        self.body, self.step_of = body, step_of
+        self.body, self.step_of, self.lumpy = body, step_of, body.lumpy
 
     def covariance(self, t, s):
         return at_any(self.body, self.body, self.step_of(t), self.step_of(s))

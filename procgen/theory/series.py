@@ -88,6 +88,11 @@ class SeriesTheory:
         sources = self.expression.sources
         return bool(sources) and all(s.kind == PROCESS and s.detail.discrete for s in sources)
 
+    @property
+    def lumpy(self) -> bool:
+        """Whether some values have a chance of their own, as 0 has where demand is intermittent: paths may be equal."""
+        return self.expression.lumpy
+
     def marginal(self, step: int) -> Any | None:
         """The law at one step as a frozen SciPy distribution."""
         return self._try("marginal", lambda: laws.marginal(self.expression, int(step)))

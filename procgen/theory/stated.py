@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
 
 from procgen.theory import known
+from procgen.theory.counted import Centred, Compound, Inflated
 from procgen.theory.expression import Expression, product
 from procgen.theory.known import Known
 from procgen.theory.linear import At, Linear, base_of
@@ -18,7 +20,6 @@ from procgen.theory.verdict import GROWS, VARIES, judge
 
 Steps = np.ndarray
 Covariance = Callable[[Steps, Steps], np.ndarray]
-NODES = 200
 
 
 class Stated(Process):
@@ -88,6 +89,7 @@ class Drawn(Process):
         self.driver, self.body, self.level, self.path = driver, body, level, path
         self.law, self.discrete, self.lumpy = law, discrete, lumpy or discrete
         self.central = [polynomial(body, each) for each in central]
+        self._powers: dict[tuple[int, int], Expression] = {}  # by the orders at one step, and at another beside it
 
     def covariance(self, t, s):
         same = t == s
@@ -128,6 +130,11 @@ class Drawn(Process):
         return self.level + Expression(self.body.space, self.path.scaled(-1.0))
 
     def _power(self, order: int) -> Expression:
+        if (order, 0) not in self._powers:
+            self._powers[order, 0] = self._power_of(order)
+        return self._powers[order, 0]
+
+    def _power_of(self, order: int) -> Expression:
         """E (x - E x)^order given L, as an expression."""
         if order == 0:
             return Expression(self.body.space, known.constant(1.0))
@@ -136,6 +143,11 @@ class Drawn(Process):
         return self.central[0] + product(self.body.space, [self._deviation()] * 2)
 
     def _more_at_once(self, a: int, b: int) -> Expression:
+        if (a, b) not in self._powers:
+            self._powers[a, b] = self._more(a, b)
+        return self._powers[a, b]
+
+    def _more(self, a: int, b: int) -> Expression:
         """What E of powers a and b at one step, given L, has beyond the product of both."""
         two, three, four = self.central
         deviation, space = self._deviation(), self.body.space
@@ -216,6 +228,19 @@ class Stating:
         process.highest_moment = float(highest)
         return self.process(process, path)
 
+    def inflated(self, passes: Expression, body: Expression, share: float) -> Expression:
+        """A body where `passes` is 1, which it is with probability 1 - share, and 0 where it is 0."""
+
+        def law(step: int) -> Inflated:
+            from procgen.theory.laws import marginal
+
+            inner = marginal(body, step)
+            if not getattr(inner, "spacing", 0.0):
+                raise Unknown("a law with a chance of 0 beside a density is not computed")
+            return Inflated(inner, share)
+
+        return replace(product(self.space, [passes, body]), law=law)
+
 
 def _mean_path(level: Expression, name: str) -> Known:
     """E of an expression at each step, as a known path; recognised where it is constant."""
@@ -231,74 +256,6 @@ def _mean_path(level: Expression, name: str) -> Known:
     cycle = frozenset().union(*periods) if still and len(periods) == len(paths) else None
     notes = "; ".join(dict.fromkeys(note for path in paths for note in path.notes)) or f"the mean moves in {name}"
     return known.whole(("mean of", name), lambda steps: mean_at(level, np.asarray(steps, np.int64)), cycle, notes)
-
-
-class Centred:
-    """A law less its mean; of whole numbers it keeps `pmf`, and `base` says what is added to them."""
-
-    def __init__(self, law: Any):
-        self.law, self.base = law, float(law.mean())
-        if hasattr(law, "pmf"):
-            self.pmf = lambda x: law.pmf(np.rint(np.asarray(x, float) + self.base))
-
-    def cdf(self, x):
-        return self.law.cdf(np.asarray(x, float) + self.base)
-
-    def sf(self, x):
-        return self.law.sf(np.asarray(x, float) + self.base)
-
-    def pdf(self, x):
-        return self.law.pdf(np.asarray(x, float) + self.base)
-
-    def ppf(self, p):
-        return self.law.ppf(p) - self.base
-
-    def mean(self) -> float:
-        return 0.0
-
-    def var(self) -> float:
-        return float(self.law.var())
-
-
-class Compound:
-    """Whole numbers whose parameter is itself drawn from a continuous law: averages over its quantiles' middle points.
-
-    The parameter's ranks are mapped to normals, where a rule with equal steps is exact to rounding for what is smooth.
-    """
-
-    def __init__(self, law: Callable[[float], Any], of: Any):
-        from scipy.stats import norm
-
-        z = np.linspace(-8.3, 8.3, NODES)
-        weights = np.exp(-z * z / 2.0)
-        self.weights = weights / weights.sum()
-        self.laws = [law(float(x)) for x in np.where(z < 0, of.ppf(norm.cdf(z)), of.isf(norm.sf(z)))]
-
-    def _averaged(self, name: str, x: Any) -> np.ndarray:
-        return sum(w * getattr(each, name)(x) for w, each in zip(self.weights, self.laws, strict=True))
-
-    def pmf(self, x):
-        return self._averaged("pmf", x)
-
-    def cdf(self, x):
-        return self._averaged("cdf", x)
-
-    def sf(self, x):
-        return self._averaged("sf", x)
-
-    def ppf(self, p):
-        top = max(float(each.isf(1e-17)) for each in self.laws)
-        counts = np.arange(top + 1.0)
-        return np.searchsorted(self.cdf(counts), np.asarray(p, float)).astype(float)
-
-    def mean(self) -> float:
-        return float(sum(w * each.mean() for w, each in zip(self.weights, self.laws, strict=True)))
-
-    def var(self) -> float:
-        mean = self.mean()
-        return float(
-            sum(w * (each.var() + (each.mean() - mean) ** 2) for w, each in zip(self.weights, self.laws, strict=True))
-        )
 
 
 def polynomial(x: Expression, coefficients: Sequence[float]) -> Expression:

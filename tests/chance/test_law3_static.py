@@ -35,6 +35,7 @@ EXEMPT = {
         "ahead",
         "rank",
         "ranks",
+        "following",
     },
 }
 # Single functions: only whether a spec is accepted, or a length rounded to a power of two, depends on them.

@@ -1,0 +1,134 @@
+"""Counts: Poisson and negative binomial numbers, of one mean or of a mean that follows a body."""
+
+from __future__ import annotations
+
+from typing import Any, ClassVar
+
+import numpy as np
+
+from procgen.chance.laws import LAWS
+from procgen.chance.portable import exp
+from procgen.chance.tables import NegativeBinomial, Poisson, uniforms
+from procgen.spec.declare import Body, Parameter, Real
+from procgen.terms.base import Ahead, Draw, Term, Unknown, number
+
+UNIFORM = LAWS["uniform"]()
+MEAN = Parameter(
+    "mean", "μ", Real(above=0, at_most=1e5), "mean count a step; with a body, the factor before its exponential", 1.0
+)
+OF = Parameter(
+    "of", "", Body(), "logarithm of the mean, beside the factor `mean`; a list is a sum; none when absent", default=None
+)
+
+
+class Counts(Term):
+    """What both laws share: subclasses give the `law`, and its central moments as polynomials in the mean."""
+
+    family = "counts and demand"
+    outputs = ("intensity",)
+
+    def law(self) -> Any:
+        """The law at the mean `mean`; it can count with other means, too."""
+        raise NotImplementedError
+
+    def central(self) -> tuple[tuple[float, ...], ...]:
+        """Central moments of orders 2, 3, 4 in powers of the mean, from power 0 on."""
+        raise NotImplementedError
+
+    def draws(self):
+        return (Draw("count", UNIFORM),)
+
+    def reach(self, head):
+        return (head,) * self.arity
+
+    def begin(self, before):
+        return self._counted([rows[len(rows) - before.head :] for rows in before.inputs]), {}
+
+    def recurse(self, inputs, state, at):
+        return self._counted(inputs), state
+
+    def _counted(self, inputs):
+        *body, z = inputs
+        if not body:
+            return {"": self.law().counts(uniforms(z)), "intensity": np.full((len(z), 1), float(self.mean))}
+        intensity = self.mean * exp(body[0])
+        return {"": self.law().counts(uniforms(z), intensity), "intensity": intensity}
+
+    def unranked(self):
+        return ""
+
+    def rank(self, values, cell, known, state, at):
+        law = self.law().distribution(self.mean * np.exp(known[0]) if len(known) > 1 else None)
+        return (law.cdf(cell[0]), law.cdf(cell[1])), {}
+
+    def ahead(self, steps, state, *inputs):
+        if len(inputs) > 1 and np.any(inputs[0].variance != 0.0):
+            return Unknown(f"{self.kind} follows the law of its body's forecast, not its mean and variance alone")
+        mean = self.mean * np.exp(inputs[0].mean) if len(inputs) > 1 else np.full((len(steps), 1), float(self.mean))
+        return Ahead(mean, np.polynomial.polynomial.polyval(mean, self.central()[0]))
+
+    def moments(self, axis, *inputs):
+        intensity = inputs[0].exp() * self.mean if inputs else axis.level(self.mean)
+        law = self.law()
+        counts = axis.drawn(
+            self.address, UNIFORM, intensity, (0.0, 1.0), self.central(), given=law.distribution, discrete=True
+        )
+        return axis.offering(counts, intensity=intensity)
+
+    def equation(self, *inputs):
+        mean = number(self.mean) if len(inputs) == 1 else f"{number(self.mean)} exp({inputs[0]}[t])"
+        return f"x[t] | m[t] {self.says()},  m[t] = {mean}"
+
+
+class PoissonCounts(Counts):
+    kind = "poisson"
+    purpose = "Poisson counts, of one mean, or of a mean whose logarithm is a body: arrivals, orders, defects"
+    source = "Cox (1955) for a mean that moves by chance; Zeger (1988) for its moments; inversion: Temme (1979)"
+    example = "poisson: {mean: 4, of: [{ar: {phi: 0.9, total_sd: 0.4}}]}"
+    knows = "mean, variance E m + Var m, covariance Cov(m, m′), and the law at a step; the same of a known body"
+    parameters: ClassVar[tuple[Parameter, ...]] = (MEAN, OF)
+
+    def law(self):
+        return Poisson(self.mean)
+
+    def central(self):
+        return (0.0, 1.0), (0.0, 1.0), (0.0, 1.0, 3.0)
+
+    def says(self):
+        return "Poisson, variance m[t]"
+
+
+class NegativeBinomialCounts(Counts):
+    kind = "negative_binomial"
+    purpose = "counts that vary more than Poisson ones: negative binomial, of one mean or of one that follows a body"
+    source = "Johnson, Kemp & Kotz (2005), ch. 5; Zeger (1988) for a mean that moves by chance"
+    example = "negative_binomial: {mean: 4, size: 2, of: [{seasonal: {period: 7, harmonics: [{amplitude: 0.5}]}}]}"
+    knows = "mean, variance E m + E m²/r + Var m, covariance Cov(m, m′), and the law at a step"
+    parameters: ClassVar[tuple[Parameter, ...]] = (
+        MEAN,
+        Parameter(
+            "size", "r", Real(at_least=0.01, at_most=10_000), "the variance is m + m²/r: large r is nearly Poisson"
+        ),
+        OF,
+    )
+
+    @classmethod
+    def check(cls, values):
+        if values["mean"] > 10_000.0 * values["size"]:
+            yield (
+                "size",
+                f"expected a size of at least mean/10,000 = {number(values['mean'] / 10_000.0)}, got "
+                f"{number(values['size'])}; raise size, or lower mean",
+            )
+
+    def law(self):
+        return NegativeBinomial(self.mean, self.size)
+
+    def central(self):
+        r = self.size
+        third = (0.0, 1.0, 3.0 / r, 2.0 / (r * r))
+        fourth = (0.0, 1.0, 7.0 / r + 3.0, (12.0 / r + 6.0) / r, (6.0 / r + 3.0) / (r * r))
+        return (0.0, 1.0, 1.0 / r), third, fourth
+
+    def says(self):
+        return f"negative binomial, variance m[t] + m[t]²/{number(self.size)}"

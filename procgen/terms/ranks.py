@@ -1,0 +1,83 @@
+"""The ranks of values given their past: uniform shocks of terms that cannot be undone.
+
+If F is the law of a value X given all before it, P(X < x) + v·P(X = x) is uniform and independent of the past for
+a uniform v of its own (Rosenblatt 1952; Brockwell 2007): whatever the law, it can be judged as shocks are.
+"""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+
+from procgen.terms.base import Array, Node, Term, Unknown
+from procgen.terms.graph import Graph, Source
+from procgen.terms.recover import KnownParts, sources_below
+
+ROOT_12 = 3.4641016151377544
+OFF = 1e-6  # how far from a whole number a value may lie that is one
+
+
+def ranking(graph: Graph, series: str, whole: bool, grain: float) -> Ranking | Unknown | None:
+    """A way from a series to the ranks of one of its terms; why there is none, or None where no term has ranks.
+
+    whole: whether the term's values are whole numbers. grain: the distance of neighbouring values as stored, or 0.
+    """
+    node: Any = graph.series[series]
+    chain: list[tuple[Node, int]] = []
+    while not isinstance(node, Source):
+        if not node.term.unranked():
+            hidden = [part for part in node.inputs if not isinstance(part, Source) and sources_below(graph, part)]
+            if hidden:
+                return Unknown(f"{node.name} follows {hidden[0].name}, which moves by chance and is not seen")
+            return Ranking(graph, chain, node, whole, grain)
+        random = [i for i, part in enumerate(node.inputs) if sources_below(graph, part)]
+        if len(random) != 1 or type(node.term).invert is Term.invert:
+            return None
+        chain.append((node, random[0]))
+        node = node.inputs[random[0]]
+    return None
+
+
+class Ranking:
+    """Ranks of one series of a fixed set of paths, as standardised uniforms, tile after tile from step 0."""
+
+    def __init__(self, graph: Graph, chain: list[tuple[Node, int]], node: Node, whole: bool, grain: float):
+        self.node, self._whole, self._grain = node, whole, grain
+        self._steps = [*chain, (node, -1)]
+        self._states: list[Any] = [None] * len(self._steps)
+        self._step = 0
+        beside = [part for at, i in self._steps for k, part in enumerate(at.inputs) if k != i]
+        self._sure = [part for part in beside if not sources_below(graph, part)]
+        self._known = KnownParts(graph, self._sure) if self._sure else None
+
+    @property
+    def plain(self) -> bool:
+        """Whether the series is the term itself, so that stored rounding is that of the term."""
+        return len(self._steps) == 1
+
+    def tile(self, values: Array, v: Array) -> Array | Unknown:
+        """Standardised uniforms (steps, paths) of the next steps' values, by uniforms `v`; NaN where not known."""
+        at = np.arange(self._step, self._step + len(values))
+        known = self._known.rows(len(values)) if self._known else {}
+        for k, (node, random) in enumerate(self._steps):
+            beside = [None if i == random else known.get(id(part)) for i, part in enumerate(node.inputs)]
+            if node is self.node:
+                answer = node.term.rank(values, self._cell(values), beside, self._states[k], at)
+            else:
+                answer = node.term.invert(values, beside, self._states[k], at)
+            if isinstance(answer, Unknown):
+                return answer
+            values, self._states[k] = answer
+        self._step += len(at)
+        below, upto = values
+        return ROOT_12 * (below + v * (upto - below) - 0.5)
+
+    def _cell(self, values: Array) -> tuple[Array, Array]:
+        """What is stored as these values: a cell of the rounding, or the value alone."""
+        if self._whole:
+            near = np.rint(values)
+            near = np.where(np.abs(values - near) <= OFF * np.maximum(1.0, np.abs(near)), near, np.nan)
+            return near - 0.5, near + 0.5
+        half = self._grain / 2.0
+        return (values - half, values + half) if half else (np.nextafter(values, -np.inf), values)
