@@ -5,6 +5,7 @@ from __future__ import annotations
 from textwrap import wrap
 from typing import Any
 
+from procgen.report.symbols import symbolic
 from procgen.spec.model import Spec
 from procgen.terms.base import number
 from procgen.terms.combine import Scaled, Sum
@@ -13,10 +14,13 @@ from procgen.terms.graph import Graph, Source, build
 
 def equations(spec: Spec, width: int, graph: Graph | None = None) -> list[str]:
     """Every shared body and series with what it is the sum of, and the equation of each term; of a graph if there."""
-    graph = graph or build(spec)
+    graph, drawn = symbolic(graph or build(spec))
     lines = []
     for owner in [*spec.shared, *spec.series]:
         lines += ["", *_Body(graph, owner).lines(width)]
+    if drawn:
+        text = f"drawn by path: {', '.join(drawn)}; numbers that follow from them are written at their medians"
+        lines += ["", *wrap(text, width, subsequent_indent="  ")]
     return lines
 
 

@@ -54,7 +54,7 @@ class Scaled(Term):
     """A factor on a body, from `times:`; not a kind of its own."""
 
     def __init__(self, factor):
-        super().__init__({"factor": float(factor)})
+        super().__init__({"factor": factor})
 
     def reach(self, head):
         return (head,)

@@ -8,6 +8,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.spec.draws import NormalDraw
 from procgen.theory.memory import _durbin_levinson
 from procgen.theory.mixedlaw import MixedLaw, MixedNormals, Normal
 from procgen.theory.series import SeriesTheory, _steps
@@ -17,6 +18,8 @@ from procgen.theory.verdict import Stationarity
 
 NOT_ERGODIC = "not ergodic"
 LONGEST_MEAN = 1_000_000  # steps
+SAME = 1e-11  # of numbers that can only differ by rounding
+AREA = 1e-9  # of a law, anywhere
 
 
 class MixedSeries(SeriesTheory):
@@ -112,7 +115,30 @@ class MixedSeries(SeriesTheory):
 
     @cached_property
     def gaussian(self) -> bool:
-        return False
+        """Whether it stays Gaussian over the law of its parameters: normal ones, that only shift it."""
+        series = [node.theory[self.name] for node in self._few]
+        laws = [p.varying.law for p in self.mixture.parameters.values()]
+        if not all(isinstance(law, NormalDraw) and law.within is None for law in laws):
+            return False
+        return all(one.gaussian for one in series) and self._only_shifted(series)
+
+    def _only_shifted(self, series: list[SeriesTheory]) -> bool:
+        """Whether, at some steps, covariances do not depend on the parameters and means are linear in them.
+
+        Asked at products of four nodes each, which tell lines from all that is curved.
+        """
+        last = max(self.expression.space.horizon - 1, 0)
+        t, s = (grid.ravel() for grid in np.meshgrid(*[np.unique(np.minimum([0, 1, 2, 7, last // 2, last], last))] * 2))
+        covariances, means = [one.covariance(t, s) for one in series], [one.mean(t) for one in series]
+        if any(found is None for found in (*covariances, *means)):
+            return False
+        spread, middle = np.array(covariances), np.array(means)
+        design = np.array([(1.0, *node.values) for node in self._few])
+        fitted = design @ np.linalg.lstsq(design, middle, rcond=None)[0]
+        return bool(
+            np.all(np.abs(spread - spread[0]) <= SAME * (np.max(np.abs(spread)) + 1e-300))
+            and np.all(np.abs(fitted - middle) <= SAME * (np.max(np.abs(middle)) + 1e-300))
+        )
 
     @cached_property
     def discrete(self) -> bool:
@@ -122,11 +148,15 @@ class MixedSeries(SeriesTheory):
     def marginal(self, step: int) -> Any | None:
         return self._try("marginal", lambda: self._marginal(int(step)))
 
-    def _marginal(self, step: int) -> MixedLaw:
+    def _marginal(self, step: int) -> Any:
         at = np.array([step])
+        if self.gaussian:
+            from scipy import stats
+
+            return stats.norm(float(self._mean(at)[0]), float(np.sqrt(self._covariance(at, at)[0])))
         spread = np.sqrt(np.maximum(self._covariance(at, at), 0.0))
         x = self._mean(at) + spread * np.linspace(-7.0, 7.0, 57)
-        _, nodes = self.mixture.settled(lambda nodes: [law.cdf(x) for law in self._laws(nodes, step)])
+        _, nodes = self.mixture.settled(lambda nodes: [law.cdf(x) for law in self._laws(nodes, step)], AREA)
         laws, weights = self._laws(nodes, step), [node.weight for node in nodes]
         if all(isinstance(law, Normal) for law in laws):
             return MixedNormals(weights, [law.mean for law in laws], [law.sd for law in laws])

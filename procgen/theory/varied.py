@@ -24,7 +24,7 @@ from procgen.theory.unknown import Unknown
 
 ROUNDING = 1e-13
 TOLERANCE = 1e-9  # of each number, and a thousandth of it of the largest one asked for at once
-FEWEST, MOST_POINTS, MOST_NODES = 4, 128, 4096
+FEWEST, MOST_POINTS, MOST_NODES = 4, 128, 2048
 
 
 Answer = Callable[["list[Node]"], Sequence[NDArray]]
@@ -35,6 +35,7 @@ class Node:
     """One set of values of the parameters: its weight, and the theory given them."""
 
     weight: float
+    values: tuple[float, ...]
     theory: Any
 
 
@@ -71,7 +72,7 @@ class Mixture:
             for choice in product(*(range(len(x)) for x, _ in rules)):
                 values = {name: float(x[i]) for name, (x, _), i in zip(self.parameters, rules, choice, strict=True)}
                 weight = float(np.prod([w[i] for (_, w), i in zip(rules, choice, strict=True)]))
-                made.append(Node(weight, self._solve(self._varied.at(values, self._part))))
+                made.append(Node(weight, tuple(values.values()), self._solve(self._varied.at(values, self._part))))
             self._nodes[points] = made
         return self._nodes[points]
 
@@ -79,8 +80,8 @@ class Mixture:
         """The average of what `answer` gives at each node; see `settled`."""
         return self.settled(answer)[0]
 
-    def settled(self, answer: Answer) -> tuple[NDArray, list[Node]]:
-        """The average, and the nodes that it needs: half as many of any one parameter give it too."""
+    def settled(self, answer: Answer, room: float = 0.0) -> tuple[NDArray, list[Node]]:
+        """The average, and the nodes that it needs: half as many of any one parameter give it too, but for `room`."""
         points, known = self._points, {}
         k = 0
         while k < len(points):
@@ -93,8 +94,8 @@ class Mixture:
                     known[each] = self._average(answer, each)
             (now, size), (less, _) = known[points], known[coarser]
             with np.errstate(invalid="ignore"):
-                room = TOLERANCE * (np.abs(now) + 1e-3 * np.max(np.abs(now), initial=0.0)) + ROUNDING * size
-                good = np.all(np.abs(now - less) <= room)
+                relative = TOLERANCE * (np.abs(now) + 1e-3 * np.max(np.abs(now), initial=0.0))
+                good = np.all(np.abs(now - less) <= relative + ROUNDING * size + room)
             if good:
                 k += 1
             elif 2 * points[k] > MOST_POINTS:

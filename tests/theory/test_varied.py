@@ -141,7 +141,7 @@ def test_too_many_parameters_are_refused_with_the_reason():
     many = [{"ar": {"phi": [path({"uniform": [-0.1, 0.1]}) for _ in range(7)], "sd": 1}}]
     x = theory_of({"x": many})["x"]
     assert x.variance(STEPS) is None
-    assert x.reason("variance") == "the average over 7 drawn parameters needs more than 4,096 nodes"
+    assert x.reason("variance") == "the average over 7 drawn parameters needs more than 2,048 nodes"
 
 
 @pytest.mark.parametrize("law, frozen", [
@@ -195,3 +195,19 @@ def test_means_of_many_steps_and_frequencies():
     assert y.variance_of_mean([1000])[0] == pytest.approx(4 + float(of_mean(0.5, 1000)), rel=1e-9)
     assert y.long_run_variance is None and "drawn by path" in y.reason("long_run_variance")
     assert y.partial_autocorrelation([0, 1])[1] == pytest.approx((4 + 2 / 3) / (4 + 4 / 3), rel=1e-12)
+
+
+def test_normal_levels_and_slopes_leave_a_series_gaussian():
+    level, slope = path({"normal": {"mean": 7, "sd": 2}}), path({"normal": {"mean": 0, "sd": 0.1}})
+    shifted = theory_of({"x": [{"trend": {"level": level, "slope": slope}}, {"ar": {"phi": 0.5, "sd": 1}}]})["x"]
+    assert shifted.gaussian and shifted.excess_kurtosis_at(9) == pytest.approx(0.0, abs=1e-9)
+    known = stats.norm(7, np.sqrt(4 + 81 * 0.01 + 4 / 3))
+    assert shifted.marginal(9).sf(12.0) == pytest.approx(known.sf(12.0), rel=1e-11)
+    for body in (
+        [{"constant": path({"uniform": [0, 1]})}, {"white_noise": {"sd": 1}}],
+        [{"constant": path({"normal": {"mean": 0, "sd": 1, "within": [-2, 2]}})}, {"white_noise": {"sd": 1}}],
+        [{"constant": level}, {"white_noise": {"sd": 1, "law": "laplace"}}],
+        [{"power": {"of": [{"constant": level}], "exponent": 2}}, {"white_noise": {"sd": 1}}],
+        [{"white_noise": {"sd": 1}, "times": level}],
+    ):
+        assert not theory_of({"x": body})["x"].gaussian, body
