@@ -10,6 +10,7 @@ import numpy as np
 
 NODES = 120
 NOTHING = 1e-18
+ROUNDING = 1e-12
 
 
 class Centred:
@@ -19,11 +20,17 @@ class Centred:
         self.law, self.base = law, float(law.mean())
         self.spacing = 1.0 if hasattr(law, "pmf") else 0.0
 
+    def _with_mean(self, x):
+        """Values with the mean added again; whole numbers are whole once more, or their chance would be missed."""
+        x = np.asarray(x, float) + self.base
+        near = np.rint(x)
+        return np.where(np.abs(x - near) <= ROUNDING * np.maximum(np.abs(x), 1.0), near, x) if self.spacing else x
+
     def cdf(self, x):
-        return self.law.cdf(np.asarray(x, float) + self.base)
+        return self.law.cdf(self._with_mean(x))
 
     def sf(self, x):
-        return self.law.sf(np.asarray(x, float) + self.base)
+        return self.law.sf(self._with_mean(x))
 
     def pdf(self, x):
         return self.law.pdf(np.asarray(x, float) + self.base)
