@@ -42,6 +42,8 @@ _HEAD = (
 )
 _FIGURES = (3, 4, 5, 7)  # of _HEAD: columns of numbers
 OPEN = 12  # checks that agree and are not folded away
+# Should a name ever slip through as markup, a browser still loads nothing and runs nothing.
+_POLICY = "default-src 'none'; style-src 'unsafe-inline'; base-uri 'none'; form-action 'none'"
 MOST_ROWS = 300  # of a table: more would not be read, and weigh more than all pictures
 _CAUTIONS = (
     "Pictures are for looking, the checks are for judging: a band of chance holds 95 times in 100 for each point on "
@@ -68,6 +70,7 @@ def whole_page(gallery: Gallery | None, verdict: Verdict | None = None) -> str:
     parts = [
         "<!doctype html>",
         '<html lang="en"><head><meta charset="utf-8">',
+        f'<meta http-equiv="Content-Security-Policy" content="{_POLICY}">',
         '<meta name="viewport" content="width=device-width, initial-scale=1">',
         f"<title>{title}{judged}</title>",
         f"<style>{PAGE}</style></head><body>",

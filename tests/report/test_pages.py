@@ -3,6 +3,7 @@
 import shutil
 import subprocess
 from html import escape
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -20,6 +21,7 @@ from tests.report.pages import drawing, ensemble, self_contained
 HOSTILE = (
     "<script>alert(1)</script>\"'><img src=x onerror=y> ]]> &amp; </title></style> \u202egnp.exe\u2066 {{7*7}} $x^2$"
 )
+SPECS = Path(__file__).parent.parent.parent / "specs"
 AR = [{"constant": 5}, {"ar": {"phi": 0.5, "sd": 1}}]
 GARCH = [{"garch": {"omega": 0.1, "alpha": 0.1, "beta": 0.8}}]
 WALK = [{"random_walk": {"sd": 1}}]
@@ -69,6 +71,25 @@ def test_what_a_page_holds_and_in_which_order():
         assert words in said
     assert "garch: {omega: 0.1, alpha: 0.1, beta: 0.8}" in said
     assert "@media print" in text and "prefers-color-scheme: dark" in text and 'name="viewport"' in text
+
+
+@pytest.mark.parametrize("file", sorted(SPECS.glob("*.yaml")), ids=lambda file: file.stem)
+def test_every_spec_of_the_gallery_has_pictures(file):
+    spec = pg.load(file)
+    shown = of_data(pg.render(spec, paths=55, steps=min(spec.time.steps, 72)))
+    assert [len(section.charts) > 0 for section in shown.sections] == [True] * len(spec.series)
+    self_contained(whole_page(shown))
+
+
+def test_a_page_may_load_nothing_and_run_nothing():
+    policy = "default-src 'none'; style-src 'unsafe-inline'"
+    assert f'<meta http-equiv="Content-Security-Policy" content="{policy}' in whole_page(of_data(ensemble({"x": AR})))
+
+
+def test_a_long_spec_is_cut():
+    table = {"seasonal": {"period": 20_000, "profile": [k / 7 for k in range(20_000)]}}
+    text = whole_page(of_data(ensemble({"x": [table, *AR]}, paths=3, steps=10)))
+    assert len(text) < 200_000 and "…</pre>" in text
 
 
 def test_what_departs_stands_first_and_at_its_series():
@@ -162,6 +183,15 @@ def test_a_sample_is_spread_over_all_paths_and_says_so(tmp_path):
     assert np.array_equal(short.values["x"], found["x"][:1, :20])
     assert short.says.endswith(", the first 20 of 50 steps")
     assert of_ensemble(found).says == "all 90 paths"
+
+
+def test_of_very_many_series_those_that_depart_are_shown():
+    series = {f"s{k}": AR for k in range(30)}
+    found = ensemble(series, paths=4, steps=10)
+    assert list(of_ensemble(found, first=["s29"]).values) == [f"s{k}" for k in range(23)] + ["s29"]
+    assert of_ensemble(found).says == "all 4 paths; 24 of 30 series"
+    page = self_contained(whole_page(of_data(found)))
+    assert "series-23" in page.ids and "series-24" not in page.ids
 
 
 def test_a_table_is_sampled_as_an_ensemble_is():

@@ -53,8 +53,9 @@ def of_verdict(verdict: Verdict) -> Gallery | None:
     """The pictures of what a verdict has judged; None where it does not know its data."""
     if verdict.origin is None:
         return None
-    sample = of_origin(verdict.origin)
-    pairs = [tuple(row.series.split(" ~ ")) for row in verdict.rows if row.outcome == "departs" and " ~ " in row.series]
+    departing = [row.series for row in verdict.rows if row.outcome == "departs"]
+    sample = of_origin(verdict.origin, [name for names in departing for name in names.split(" ~ ")])
+    pairs = [tuple(names.split(" ~ ")) for names in departing if " ~ " in names]
     ensemble = getattr(verdict.origin, "ensemble", None)
     record = _record_of_data(ensemble, sample.spec) if ensemble is not None else _record(sample.spec)
     return _gallery(sample, record, [(a, b) for a, b, *_ in pairs])

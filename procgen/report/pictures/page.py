@@ -7,10 +7,11 @@ from typing import Any
 
 from procgen.report.pictures.chart import Chart
 from procgen.report.pictures.gallery import Gallery, Section
-from procgen.report.pictures.safe import escaped
+from procgen.report.pictures.safe import escaped, short
 from procgen.report.pictures.svg import figure
 
 WIDTH = 92  # letters of a line of an equation
+MOST_TEXT = 60_000  # letters of a spec that are shown: one may hold tables
 MANY = 3  # series from which a page begins with a list of them
 
 
@@ -25,13 +26,13 @@ def contents(gallery: Gallery) -> Iterator[str]:
 
 def series(gallery: Gallery, found: dict[str, Sequence[str]]) -> Iterator[str]:
     """A section for each series; `found` are sentences about what departs in it."""
-    equations = _equations(gallery.sample.spec)
+    equations = _equations(gallery.sample.spec, [section.subject.name for section in gallery.sections])
     for place, section in enumerate(gallery.sections):
         yield f'<section class="series" id="series-{place}">'
         yield from _heading(section, found.get(section.subject.name, ()))
         text = equations.get(section.subject.name)
         if text:
-            yield f"<pre>{escaped(text)}</pre>"
+            yield f"<pre>{escaped(short(text, MOST_TEXT))}</pre>"
         yield from figures(section.charts, f"s{place}")
         yield "</section>"
     if gallery.shared:
@@ -85,7 +86,7 @@ def provenance(gallery: Gallery) -> Iterator[str]:
 
     spec = gallery.sample.spec
     text = yaml.safe_dump(_plain(spec.raw), sort_keys=False, allow_unicode=True, default_flow_style=None, width=100)
-    yield f'<section id="spec"><h2>The spec</h2><pre>{escaped(text.rstrip())}</pre></section>'
+    yield f'<section id="spec"><h2>The spec</h2><pre>{escaped(short(text.rstrip(), MOST_TEXT))}</pre></section>'
     yield '<section id="record"><h2>Where this is from</h2><dl>'
     yield from (f"<dt>{escaped(name)}</dt><dd>{escaped(value)}</dd>" for name, value in gallery.record)
     yield f"<dt>pictures show</dt><dd>{escaped(gallery.sample.says)}</dd></dl></section>"
@@ -100,18 +101,16 @@ def _plain(value: Any) -> Any:
     return value if isinstance(value, str | int | float | bool) or value is None else str(value)
 
 
-def _equations(spec: Any) -> dict[str, str]:
-    """The equations of each body by its name; those of shared bodies stand before the first series."""
+def _equations(spec: Any, names: Sequence[str]) -> dict[str, str]:
+    """The equations of each series by its name; before those of the first one stands what belongs to none alone."""
     from procgen.report.equations import equations
 
-    bodies: list[list[str]] = []
-    for line in equations(spec, WIDTH):
-        if not line:
-            bodies.append([])
+    found: dict[str, str] = {}
+    common: list[str] = []
+    for paragraph in "\n".join(equations(spec, WIDTH)).strip("\n").split("\n\n"):
+        owner = paragraph.partition("[t] = ")[0]
+        if owner in spec.series:
+            found[owner] = paragraph
         else:
-            bodies[-1].append(line)
-    names = [*spec.shared, *spec.series]
-    texts = dict(zip(names, ("\n".join(body) for body in bodies), strict=True))
-    first = next(iter(spec.series))
-    texts[first] = "\n\n".join([*(texts[name] for name in spec.shared), texts[first]])
-    return texts
+            common.append(paragraph)
+    return {**found, names[0]: "\n\n".join([*common, found.get(names[0], "")]).strip("\n")}

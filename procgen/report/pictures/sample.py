@@ -15,6 +15,7 @@ LIMIT = 1 << 24  # values of all series together that are held: 134 MB
 DRAWN_LIMIT = 1 << 21  # the same for paths that are drawn for a picture only
 DRAWN_PATHS = 200
 STRIP = 400  # steps of a path's parts that are shown
+SERIES = 24  # that are shown
 STRETCHES = 8  # of neighbouring paths, spread over an ensemble that is too large to be held
 
 Stretch = tuple[int, int]  # first path, number of paths
@@ -28,7 +29,7 @@ class Sample:
     Attributes
     ----------
     spec : the spec that the values should follow
-    values : series -> (paths, steps), NaN where a value is missing; some of all paths, the first ones of all steps
+    values : series (SERIES at most) -> (paths, steps), NaN where a value is missing; some of all paths, the first steps
     parts : revealed term or output -> its first STRIP steps on the first path
     first_path : number of the first path
     all_paths, all_steps : how many there are
@@ -63,31 +64,34 @@ class Sample:
         else:
             what = "the only path" if self.paths == 1 else f"all {self.paths:,} paths"
         some = f", the first {self.steps:,} of {self.all_steps:,} steps" if self.steps < self.all_steps else ""
+        count = len(self.spec.series)
+        some += f"; {len(self.values)} of {count} series" if len(self.values) < count else ""
         return what + some + (f"; {self.note}" if self.note else "")
 
 
-def of_ensemble(ensemble: Any, limit: int = LIMIT, spec: Any = None) -> Sample:
+def of_ensemble(ensemble: Any, limit: int = LIMIT, spec: Any = None, first: Sequence[str] = ()) -> Sample:
     """Some paths of an ensemble, to be held against its own spec or another one.
 
-    Paths that cannot be read are left out, and it is said.
+    Paths that cannot be read are left out, and it is said. Of very many series, those in `first` are taken, and then
+    the first ones.
     """
     spec, whole = spec or ensemble.spec, ensemble.whole
-    names = list(spec.series)
+    names = _shown(spec, first)
     paths, steps = _share(whole.paths, whole.steps, limit // len(names))
-    first = whole.first_path
-    chosen = _stretches(first, whole.paths, paths)
+    begin = whole.first_path
+    chosen = _stretches(begin, whole.paths, paths)
     values, note = _filled(_stored(ensemble, chosen, names), names, chosen, steps)
     parts = [name for name in ensemble.names if name not in spec.series]
     strips: dict[str, NDArray] = {}
     if parts:
-        found, _ = _filled(_stored(ensemble, [(first, 1)], parts), parts, [(first, 1)], min(steps, STRIP))
+        found, _ = _filled(_stored(ensemble, [(begin, 1)], parts), parts, [(begin, 1)], min(steps, STRIP))
         strips = {name: rows[0] for name, rows in found.items()}
-    return Sample(spec, values, whole.paths, whole.steps, first, strips, note=note)
+    return Sample(spec, values, whole.paths, whole.steps, begin, strips, note=note)
 
 
-def of_table(table: Any, limit: int = LIMIT) -> Sample:
+def of_table(table: Any, limit: int = LIMIT, first: Sequence[str] = ()) -> Sample:
     """Some paths of anyone's table that was read for `validate`."""
-    names = list(table.spec.series)
+    names = _shown(table.spec, first)
     paths, steps = _share(table.paths, table.steps, limit // len(names))
     values, note = _filled(table.blocks(), names, _stretches(0, table.paths, paths), steps)
     return Sample(table.spec, values, table.paths, table.steps, note=note)
@@ -100,15 +104,23 @@ def of_spec(spec: Any, limit: int = DRAWN_LIMIT) -> Sample:
     paths, steps = _share(min(spec.paths, DRAWN_PATHS), spec.time.steps, limit // len(spec.series))
     ensemble = render(spec, paths=paths, steps=steps)
     shown = render(spec, paths=1, steps=min(steps, STRIP), reveal="all")
-    values = {name: ensemble[name] for name in spec.series}
+    values = {name: ensemble[name] for name in _shown(spec, ())}
     parts = {name: shown[name][0] for name in shown.names if name not in spec.series}
     return Sample(spec, values, spec.paths, spec.time.steps, 0, parts, drawn=True)
 
 
-def of_origin(origin: Any) -> Sample:
-    """The sample behind what `validate` has read."""
+def of_origin(origin: Any, first: Sequence[str] = ()) -> Sample:
+    """The sample behind what `validate` has read; `first` are series that must not be left out."""
     ensemble = getattr(origin, "ensemble", None)
-    return of_table(origin) if ensemble is None else of_ensemble(ensemble, spec=_asked(origin))
+    if ensemble is None:
+        return of_table(origin, first=first)
+    return of_ensemble(ensemble, spec=_asked(origin), first=first)
+
+
+def _shown(spec: Any, first: Sequence[str]) -> list[str]:
+    """The series that are shown, in the order of the spec: all, or those in `first` and then the first ones."""
+    ranked = sorted(spec.series, key=lambda name: name not in first)[:SERIES]
+    return [name for name in spec.series if name in ranked]
 
 
 def _asked(origin: Any) -> Any:

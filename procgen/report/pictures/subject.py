@@ -62,9 +62,10 @@ class Subject:
 
 
 def subjects(sample: Sample, theory: Any) -> list[Subject]:
-    """Every series of the sample's spec."""
+    """Every series of the sample."""
     out = []
-    for name, declared in sample.spec.series.items():
+    for name in sample.values:
+        declared = sample.spec.series[name]
         whole = declared.decimals is not None or declared.type == "int64"
         grain = 10.0 ** -(declared.decimals or 0) if whole else 0.0
         out.append(Subject(name, declared.unit, grain, Stated(theory[name], sample.steps), sample))
