@@ -47,10 +47,16 @@ class Finding:
     doubt: Callable[[float], str | None] = _always
 
 
-def unit(z: float, error: float, theory: float = 0.0, skew: float = 0.0) -> Finding:
-    """A statistic that is standard normal under the theory; the estimate is theory + z·error."""
-    log_p = tails.two_sided(*tails.pearson3(z, skew))
-    return Finding(theory, theory + z * error, error, log_p, lambda level: power.shift(level, error, abs(skew)))
+def unit(z: float, error: float, theory: float = 0.0, skew: float = 0.0, excess: float = 0.0) -> Finding:
+    """A standardised sum, nearly normal under the theory, of known skewness and excess kurtosis.
+
+    The estimate is theory + z·error. The matched chi-square has an excess of its own; what is above it lifts the tail.
+    """
+    more = max(excess - 1.5 * skew * skew, 0.0)
+    log_p = min(0.0, tails.two_sided(*tails.pearson3(z, skew)) + tails.lift(z, more))
+    return Finding(
+        theory, theory + z * error, error, log_p, lambda level: power.shift(level, error, abs(skew), excess)
+    )
 
 
 def normal_mean(mean: float, mu: float, sd: float, n: int) -> Finding:
@@ -110,34 +116,54 @@ class Sample:
         fourth = m4 - 4 * m1 * m3 + 6 * m1 * m1 * m2 - 3 * m1**4
         return cls(n, m1, math.sqrt(v * n / max(n - 1, 1)), third / v**1.5, fourth / v**2 - 3)
 
+    @property
+    def gap(self) -> float:
+        """The distance of the two values, where there are only two; else 0.
+
+        Then, and only then, kurtosis = skewness² + 1 (Pearson 1916), and their shares are p q = 1/(skewness² + 4).
+        """
+        two = self.sd > 0 and self.excess + 2 - self.skew**2 < 1e-6 * (self.excess + 3)
+        return self.sd * math.sqrt(self.skew**2 + 4) if two else 0.0
+
     def scaled(self, factor: float) -> Sample:
         """The same numbers times a positive factor."""
         return replace(self, mean=self.mean * factor, sd=self.sd * factor)
 
 
-def sample_mean(sample: Sample, theory: float, sd: float | None = None) -> Finding:
+def sample_mean(sample: Sample, theory: float, sd: float | None = None, hidden: float = 0.0) -> Finding:
     """The mean of n independent numbers that need not be normal; `sample.mean` is relative to `theory`.
 
     With the theoretical `sd` the tail is that of a matched chi-square; without it, the self-normalised sum's.
+    `hidden` is a skewness that the numbers may have though this sample does not show it.
     """
-    return _known_sd(sample, theory, sd) if sd is not None else _studentised(sample, theory)
+    return _known_sd(sample, theory, sd) if sd is not None else _studentised(sample, theory, hidden)
 
 
 def _known_sd(sample: Sample, theory: float, sd: float) -> Finding:
-    n, error, skew = sample.n, sd / math.sqrt(sample.n), sample.skew / math.sqrt(sample.n)
-    log_p = tails.two_sided(*tails.pearson3(sample.mean / error, skew))
+    """The skewness is that of the sample, give or take its own error, whichever makes p larger.
+
+    Given a mean that is off by z standard errors, the sample's skewness is off by (excess - 1.5 skew²) z/sqrt(n) on
+    average: for numbers with short tails it is too small just when p is, and that is put back.
+    """
+    n, error = sample.n, sd / math.sqrt(sample.n)
+    z = sample.mean / error
+    z -= math.copysign(min(abs(z), sample.gap / (2 * n * error)), z)
+    short, doubtful = max(1.5 * sample.skew**2 - sample.excess, 0.0), math.sqrt(6.0) / n
+    skew = sample.skew / math.sqrt(n) + short * z / n
     excess = abs(sample.excess - 1.5 * sample.skew**2)
+    sides = (tails.pearson3(z, skew - doubtful), tails.pearson3(z, skew + doubtful))
+    log_p = max(tails.two_sided(*side) for side in sides) + tails.lift(z, excess / n)
     return Finding(
         theory,
         theory + sample.mean,
         error,
-        log_p,
-        lambda level: power.shift(level, error, abs(skew)),
+        min(0.0, log_p),
+        lambda level: power.shift(level, error, abs(skew) + doubtful, excess / n),
         lambda level: _few(n) or excess_doubt(excess, n, "paths")(level),
     )
 
 
-def _studentised(sample: Sample, theory: float) -> Finding:
+def _studentised(sample: Sample, theory: float, hidden: float) -> Finding:
     n, error = sample.n, sample.sd / math.sqrt(sample.n)
     t = sample.mean / error
     x = t / math.sqrt((n - 1 + t * t) / n)
@@ -145,7 +171,7 @@ def _studentised(sample: Sample, theory: float) -> Finding:
     gauge = abs(sample.skew) / (3 * math.sqrt(n))
 
     def doubt(level: float) -> str | None:
-        if gauge * power.needed(level) ** 3 > 1.0:
+        if max(gauge, hidden / (3 * math.sqrt(n))) * power.needed(level) ** 3 > 1.0:
             return f"{n} paths are too few for the skewed tail that a p of {level:.1g} lies in"
         return _few(n)
 
@@ -153,6 +179,23 @@ def _studentised(sample: Sample, theory: float) -> Finding:
         return error * (power.self_normalised(level, tails.SAFE * gauge) + power.Z_POWER)
 
     return Finding(theory, theory + sample.mean, error, log_p, detect, doubt)
+
+
+def neighbours(r: float, sample: Sample, pairs: int) -> Finding:
+    """The correlation of neighbouring independent numbers, given as pairs overlapping by one.
+
+    The products of two have the square of a number's skewness, and the square of its kurtosis.
+    """
+    root = math.sqrt(pairs)
+    skew, kurtosis = sample.skew**2, (sample.excess + 3.0) ** 2
+    gauge = skew / (3 * root)
+
+    def doubt(level: float) -> str | None:
+        if gauge * power.needed(level) ** 3 > 1.0:
+            return f"{pairs} pairs of paths are too few for the skewed tail that a p of {level:.1g} lies in"
+        return excess_doubt(kurtosis - 9.0, pairs, "pairs of paths")(level)
+
+    return replace(unit(r * root, 1 / root, skew=tails.SAFE * skew / root), doubt=doubt)
 
 
 def _few(n: int) -> str | None:

@@ -82,7 +82,8 @@ def _mean_and_variance(gather: Gather, column: int, i: int) -> Iterator[Check]:
     yield _limit(plan, "mean", _at(plan, i), "level", sample, mu, 1, math.sqrt(sigma2))
     product = gather.plan.products.index((column, i, i))
     sd = None if plan.coarse[i] else plan.product_sd.get((i, i))
-    yield _limit(plan, "variance", _at(plan, i), "spread", _sample(gather.products, product), sigma2, 2, sd)
+    sample, hidden = _sample(gather.products, product), plan.skewness(2) if sd is None else 0.0
+    yield _limit(plan, "variance", _at(plan, i), "spread", sample, sigma2, 2, sd, hidden)
 
 
 def _sample(powers: Powers, k: int) -> Sample:
@@ -91,7 +92,15 @@ def _sample(powers: Powers, k: int) -> Sample:
 
 
 def _limit(
-    plan: SeriesPlan, what: str, probe: str, kind: str, sample: Sample, theory: float, order: int, sd: float | None
+    plan: SeriesPlan,
+    what: str,
+    probe: str,
+    kind: str,
+    sample: Sample,
+    theory: float,
+    order: int,
+    sd: float | None,
+    hidden: float = 0.0,
 ) -> Check:
     """A check by a central limit theorem, where moments and paths allow it."""
     if sample.n == 0:
@@ -107,7 +116,7 @@ def _limit(
     if sample.n < FEW_PATHS or sample.sd == 0.0:
         note = f"only {sample.n} paths: reported, not judged"
         return Check(plan.name, what, probe, kind, theory, theory + sample.mean, outcome="reported", note=note)
-    return Check.of(plan.name, what, probe, kind, judge.sample_mean(sample, theory, sd))
+    return Check.of(plan.name, what, probe, kind, judge.sample_mean(sample, theory, sd, hidden))
 
 
 def _covariances(gather: Gather, column: int) -> Iterator[Check]:
@@ -135,7 +144,8 @@ def _covariances(gather: Gather, column: int) -> Iterator[Check]:
                 yield _limit(plan, "covariance", probe, "memory", sample, known, 2, sd)
             else:
                 slope = sample.scaled(1 / variance)
-                yield _limit(plan, "slope on the earlier step", probe, "memory", slope, known / variance, 2, None)
+                what, hidden = "slope on the earlier step", plan.skewness(1) ** 2
+                yield _limit(plan, what, probe, "memory", slope, known / variance, 2, None, hidden)
 
 
 def _growth(gather: Gather, column: int) -> Iterator[Check]:
@@ -236,7 +246,7 @@ def _neighbours(plan: SeriesPlan, powers: Powers) -> Iterator[Check]:
         "neighbouring paths",
         "averages over steps",
         "dependence",
-        judge.unit(r * math.sqrt(count), 1 / math.sqrt(count)),
+        judge.neighbours(r, sample, int(count)),
     )
 
 
@@ -285,6 +295,7 @@ def _cross_one(
         return
     weaker = a if a.highest <= b.highest else b
     sample = _sample(gather.crossed, k).scaled(1 / float(b.variance[j]))
-    check = _limit(weaker, "slope between series", probe, "dependence", sample, known / float(b.variance[j]), 2, None)
+    slope, hidden = known / float(b.variance[j]), a.skewness(1) * b.skewness(1)
+    check = _limit(weaker, "slope between series", probe, "dependence", sample, slope, 2, None, hidden)
     check.series = name
     yield check

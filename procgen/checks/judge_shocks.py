@@ -11,13 +11,15 @@ from numpy.typing import NDArray
 
 from procgen.checks import judge, tails
 from procgen.checks.judge import Finding
-from procgen.checks.scores import largest_gap
+from procgen.checks.saddle import REACH, sum_finding
+from procgen.checks.scores import Scores, largest_gap
 from procgen.checks.shocks import CLUSTER_LAGS, CrossSums, ShockSums
 from procgen.checks.verdict import Check
 
 _EXACT_BELOW = 5_000  # products fewer than this are judged by their exact law
 _CLUSTER_SKEW = 0.408163  # (E s^3)^2 of a cluster score s = sqrt(5) P2, which is (2 sqrt(5) / 7)^2
-_CLUSTER_EXCESS = 8.44  # excess of the sum of lagged products of cluster scores, a pair
+_CLUSTER_EXCESS = 8.45  # of the sum of lagged products: m4^2 - 3 + 6 (m4 - 1), m4 = E s^4 = 15/7
+_ASYMMETRY_EXCESS = 10.84  # of the sum of s[t] g[t - 1]: 3 m4 - 3 + 6 (E g^2 s^2 - 1), by quadrature
 
 
 def shock_checks(series: str, sums: ShockSums, source: str) -> Iterator[Check]:
@@ -45,22 +47,20 @@ def _level_and_spread(series: str, sums: ShockSums, source: str) -> Iterator[Che
             yield Check.of(series, "shocks: variance", "all steps", "spread", finding)
         return
     if no_big_jump(law, n, 1):
-        skew = float(law.skewness or 0.0) / root
-        yield Check.of(
-            series, "shocks: mean", "all steps", "level", judge.unit(mean * root, 1 / root, skew=skew), source
-        )
+        finding = sum_finding(mean * root, n, sums.scores.summand(1, n), 1 / root)
+        yield Check.of(series, "shocks: mean", "all steps", "level", finding, source)
     else:
-        yield Check.of(series, "shocks: level score", "all steps", "level", judge.unit(components[0], 1 / root), source)
-    m4, m6 = (law.moment(4), law.moment(6)) if no_big_jump(law, n, 2) else (None, None)
-    if m4 is not None and m6 is not None:
-        # (z - mean)² − 1 has third moment m6 − 3 m4 + 2 up to terms in the mean, which is 0.
-        sd = math.sqrt(m4 - 1)
-        skew = (m6 - 3 * m4 + 2) / sd**3 / root
-        spread = (second - mean * mean - 1) * root / sd
-        finding = judge.unit(spread, sd / root, theory=1.0, skew=skew)
+        finding = score_finding(components[0], n, sums.scores, 0)
+        yield Check.of(series, "shocks: level score", "all steps", "level", finding, source)
+    m4 = law.moment(4) if n > 1 and no_big_jump(law, n, 2) else None
+    if m4 is not None:
+        # Around the sample's mean: one summand less, as for normal shocks.
+        error = math.sqrt((m4 - 1) / (n - 1))
+        spread = (second - mean * mean) * n / (n - 1)
+        finding = sum_finding((spread - 1) / error, n - 1, sums.scores.summand(2, n), error, theory=1.0)
         yield Check.of(series, "shocks: variance", "all steps", "spread", finding)
     else:
-        finding = judge.unit(components[1], 1 / root)
+        finding = score_finding(components[1], n, sums.scores, 1)
         yield Check.of(series, "shocks: spread score", "all steps", "spread", finding)
 
 
@@ -69,8 +69,7 @@ def no_big_jump(law, n: int, order: int, level: float = 1e-6) -> bool:
     m = law.moment(2 * order)
     if m is None or law.moment(3 * order) is None:
         return False
-    x = 5.0 * math.sqrt(max(m - (law.moment(order) or 0.0) ** 2, 0.0) * n)
-    reach = x ** (1 / order)
+    reach = (REACH * math.sqrt(max(m - (law.moment(order) or 0.0) ** 2, 0.0) * n)) ** (1 / order)
     distribution = law.distribution()
     return n * float(distribution.sf(reach) + distribution.cdf(-reach)) < 0.1 * level
 
@@ -108,30 +107,32 @@ def _clustering(series: str, sums: ShockSums) -> Iterator[Check]:
     for i, lag in enumerate(CLUSTER_LAGS):
         pairs, total = sums.cluster[:, i]
         if pairs:
-            yield Check.of(series, "shocks: clustering", f"lag {lag}", "clustering", _product(pairs, total))
+            yield Check.of(series, "shocks: clustering", f"lag {lag}", "clustering", cluster_finding(pairs, total))
     pairs, total = sums.asymmetry
     if pairs:
-        yield Check.of(series, "shocks: asymmetric clustering", "lag 1", "clustering", _product(pairs, total))
+        yield Check.of(series, "shocks: asymmetric clustering", "lag 1", "clustering", asymmetry_finding(pairs, total))
 
 
-def _product(pairs: float, total: float) -> Finding:
-    """A sum of products of bounded scores; too few of them cannot be judged far out."""
+def asymmetry_finding(pairs: float, total: float) -> Finding:
+    """A sum of products of a cluster score and the normal score before it."""
+    return _products(pairs, total, 0.0, _ASYMMETRY_EXCESS)
+
+
+def cluster_finding(pairs: float, total: float) -> Finding:
+    """A sum of products of a cluster score and an earlier one."""
+    return _products(pairs, total, _CLUSTER_SKEW, _CLUSTER_EXCESS)
+
+
+def _products(pairs: float, total: float, skew: float, excess: float) -> Finding:
+    """A sum of products of scores; too few of them cannot be judged far out."""
     root = math.sqrt(pairs)
-    plain = judge.unit(total / root, 1 / root, skew=_CLUSTER_SKEW / root)
-    return judge.Finding(
-        plain.theory,
-        plain.estimate,
-        plain.standard_error,
-        plain.log_p,
-        plain.detect,
-        judge.excess_doubt(_CLUSTER_EXCESS, int(pairs), "pairs of shocks"),
-    )
+    plain = judge.unit(total / root, 1 / root, skew=skew / root, excess=excess / pairs)
+    return judge.with_doubt(plain, judge.excess_doubt(excess, int(pairs), "pairs of shocks"))
 
 
 def _law(series: str, sums: ShockSums) -> Iterator[Check]:
     components = sums.scores.component_sums(sums.counts)[2:]
-    finding = judge.squares(float(components @ components), len(components), sums.n)
-    finding = judge.with_doubt(finding, judge.excess_doubt(4.0, sums.n, "shocks"))
+    finding = shape_finding(float(components @ components), len(components), sums.n)
     yield Check.of(series, "shocks: shape of the law", "all steps", "law", finding)
     gap = judge.kolmogorov(largest_gap(sums.counts), sums.n)
     yield Check.of(series, "shocks: distribution function", "all steps", "law", gap)
@@ -140,6 +141,16 @@ def _law(series: str, sums: ShockSums) -> Iterator[Check]:
         check = Check.fact(series, "shocks: within the law's ends", "all steps", fault, "no shock lies beyond them")
         check.kind = "law"
         yield check
+
+
+def score_finding(z: float, n: int, scores: Scores, k: int) -> Finding:
+    """The standardised sum of component k of n shocks: bounded numbers, whose law is that of the bins."""
+    return sum_finding(z, n, scores.component_laws[k], 1 / math.sqrt(n))
+
+
+def shape_finding(q: float, dof: int, n: int) -> Finding:
+    """The sum of squares of the score components that speak of the shape alone."""
+    return judge.with_doubt(judge.squares(q, dof, n), judge.excess_doubt(4.0, n, "shocks"))
 
 
 def _by_step(series: str, sums: ShockSums) -> Iterator[Check]:

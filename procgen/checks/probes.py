@@ -13,6 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.checks import rounding
+from procgen.checks.saddle import summand
 from procgen.checks.scores import Scores
 
 GAUSSIAN_WINDOW = 96  # steps of a pooled statistic with an exact law (its cost grows with the cube)
@@ -64,6 +65,8 @@ class SeriesPlan:
     def __post_init__(self) -> None:
         self.drawn = self.variance  # before rounding
         self.coarse = np.zeros(len(self.steps), dtype=bool)  # probes hidden by rounding
+        self.may_stay = False  # whether two paths may be equal by chance, for their values can be held
+        self._skewness: dict[int, float] = {}
 
     def reason(self, name: str) -> str:
         return self.theory.reason(name) or "theory has no closed form"
@@ -72,6 +75,16 @@ class SeriesPlan:
     def constant(self) -> NDArray[np.bool_]:
         """Probes at which theory leaves nothing to chance."""
         return self.drawn <= 0.0
+
+    def skewness(self, order: int) -> float:
+        """The largest size of the skewness of deviations (order 1) or their squares (order 2), where laws are known.
+
+        A sample of a law with a long tail does not show its skewness until it has met the tail.
+        """
+        if order not in self._skewness:
+            found = [summand(scores.distribution, lambda z: z**order).skew for scores in self.scores.values()]
+            self._skewness[order] = max(map(abs, found), default=0.0)
+        return self._skewness[order]
 
     def too_coarse(self, sd: float) -> str:
         return f"rounded to {self.grain:g}, too coarse against a standard deviation of {sd:.3g}"

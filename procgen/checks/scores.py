@@ -12,6 +12,8 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.checks.saddle import REACH, Summand, summand
+
 BINS = 4096
 _ORDER = 8  # Legendre components; two of them are spent on level and spread
 _REACH, _CELLS = 16.0, 1 << 16
@@ -39,6 +41,7 @@ class Scores:
         self.law = law
         self.gaussian = bool(law.gaussian)
         self.room = _ROOM
+        self._summands: dict[tuple[int, int], Summand] = {}
 
     @cached_property
     def distribution(self) -> Any:
@@ -140,6 +143,18 @@ class Scores:
         signs = np.sign([level @ spread_first[:, 0], spread @ spread_first[:, 1]])
         spread_first[:, :2] *= np.where(signs == 0, 1.0, signs)
         return np.einsum("bi,ij->bj", basis, spread_first)
+
+    @cached_property
+    def component_laws(self) -> list[Summand]:
+        """The law of each component of one shock."""
+        return [Summand(column, np.ones(BINS)) for column in self.components.T]
+
+    def summand(self, order: int, n: int) -> Summand:
+        """The law of one shock (order 1) or its square (order 2), without what no sum of n may rest on."""
+        if (order, n) not in self._summands:
+            sd = np.sqrt(max(float(self.law.moment(2 * order)) - float(order == 2), 0.0))
+            self._summands[order, n] = summand(self.distribution, lambda z: z**order, REACH * sd * np.sqrt(n))
+        return self._summands[order, n]
 
     def component_sums(self, counts: NDArray) -> NDArray:
         """(8,) standardised component sums, each asymptotically standard normal."""

@@ -132,7 +132,7 @@ class Structure:
             copies, first, second = _equal(prints[:, column], paths)
             expected = chance_of_equal.get(what.name, 0.0) * math.comb(len(paths), 2)
             if copies and expected > _CERTAIN:
-                note = f"{copies} equal paths, but rounding makes some {expected:.2g} pairs equal by chance"
+                note = f"{copies} equal paths, but pairs may be equal by chance: values are rounded or can be held"
                 yield Check(what.name, "copied paths", "all pairs", "structure", outcome="untestable", note=note)
                 continue
             fault = ""

@@ -63,6 +63,21 @@ def pearson3(z: float, skew: float) -> tuple[float, float]:
     return (upper, lower) if skew > 0 else (lower, upper)
 
 
+def lift(z: float, excess: float) -> float:
+    """log of the factor by which an excess kurtosis above 0 raises the tail of a standardised sum beyond z.
+
+    Edgeworth's term excess/24 (z^3 - 3 z) phi(z) against the tail itself, as an exponent, which is where it grows to
+    far out (Cramer 1938).
+    """
+    from scipy.special import log_ndtr
+
+    z = abs(z)
+    if excess <= 0.0 or z * z <= 3.0:
+        return 0.0
+    hazard = math.exp(-0.5 * z * z - 0.9189385332046727 - float(log_ndtr(-z)))
+    return excess / 24 * (z**3 - 3 * z) * hazard
+
+
 def self_normalised(x: float, skew: float, n: int) -> tuple[float, float]:
     """(log upper, log lower) tail at x of sum(y)/sqrt(sum(y^2)) for n independent y of mean 0, on the safe side.
 

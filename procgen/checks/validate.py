@@ -10,6 +10,7 @@ from typing import Any
 
 import numpy as np
 
+from procgen.checks.atoms import may_stay
 from procgen.checks.gather import Gather, Plan
 from procgen.checks.judge_moments import cross_moments, moment_checks
 from procgen.checks.judge_shocks import cross_checks, shock_checks
@@ -101,6 +102,7 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
     for name, declared in spec.series.items():
         grain = grain_of(declared, th[name], steps)
         plan = plan_series(name, th[name], steps, grain, _periods(graph, name))
+        plan.may_stay = may_stay(th[name], graph, name)
         way = route(name, th[name], graph, grain, same_draws)
         series.append(plan)
         routes[name] = way
@@ -221,6 +223,8 @@ def _none_recovered(way: Route, gather: Gather) -> str:
 def _chance_of_equal(series: SeriesPlan, plan: Plan) -> float:
     """Probability that two paths of a series are equal by rounding; 0 where values are not rounded."""
     if lumpy(series.theory):
+        return 1.0
+    if series.may_stay:
         return 1.0
     if not np.isfinite(series.variance).all():
         return 0.0

@@ -1,18 +1,19 @@
 """How often true ensembles are said to depart, by family of specs, shape and level.
 
-    python tests/studies/false_alarms.py [--quick] [--seeds 2000] [--only FAMILY] [--workers 2]
+    python tests/studies/false_alarms.py [--quick] [--seeds 2000] [--only FAMILY] [--out FILE [--resume]]
 
-Every run draws an ensemble exactly as stated and judges it. Printed: the share flagged at each level with its
-99.9 % binomial interval, by family and pooled, and the calibration of every kind of check on its own.
+Every run draws an ensemble exactly as stated and judges it. Printed in Markdown: the share flagged at each level with
+its 99.9 % binomial interval, by family and pooled, and how often each kind of check had a small p. With --out, each
+finished job (a family, a shape, some seeds) is a line of JSON in FILE, and --resume leaves out what is there.
 """
 
 from __future__ import annotations
 
 import argparse
+import json
 import sys
 from collections import Counter, defaultdict
 from collections.abc import Iterator, Mapping
-from concurrent.futures import ProcessPoolExecutor
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
@@ -22,46 +23,15 @@ import numpy as np
 sys.path.insert(0, str(Path(__file__).resolve().parents[2]))
 
 from tests.studies.departures import draw, spec_of, verdict
+from tests.studies.families import FAMILIES, LONGEST, OFTEN, stated
+from tests.studies.intervals import interval
 
 LEVELS = (0.05, 0.01, 0.001)
 TAILS = (1e-2, 1e-3, 1e-4, 1e-5)
 SHAPES = ((1, 20_000), (30, 200), (200, 100), (2000, 500), (20_000, 20))
-
-_T = {"student_t": {"df": 6}}
-FAMILIES: Mapping[str, Any] = {
-    "white noise": [{"constant": 3}, {"white_noise": {"sd": 2}}],
-    "walk": [{"random_walk": {"sd": 0.5, "drift": 0.01, "start": 10}}],
-    "ar": [{"ar": {"phi": [0.7, -0.2], "sd": 1}}],
-    "arma": [{"arma": {"phi": [0.5, 0.3], "theta": [0.4], "sd": 1}}],
-    "ma": [{"ma": {"theta": [0.6, 0.3, 0.1], "sd": 1}}],
-    "seasonal": [
-        {"trend": {"level": 5, "slope": 0.01}},
-        {"seasonal": {"period": 12, "harmonics": [{"amplitude": 3, "peak": 2}, {"amplitude": 1}]}},
-        {"ar": {"phi": 0.4, "sd": 1}},
-    ],
-    "structural": [{"random_walk": {"sd": 0.2}}, {"ar": {"phi": 0.8, "sd": 1}}, {"white_noise": {"sd": 0.5}}],
-    "rounded": {"series": {"x": {"decimals": 1, "of": [{"random_walk": {"sd": 0.5}}, {"ar": {"phi": 0.6, "sd": 1}}]}}},
-    "student": [{"ar": {"phi": 0.5, "sd": 1, "law": _T}}],
-    "laplace": [{"ma": {"theta": 0.4, "sd": 1, "law": "laplace"}}],
-    "garch": [{"garch": {"omega": 0.05, "alpha": 0.1, "beta": 0.85}}],
-    "arma-garch": [
-        {"arma": {"phi": 0.5, "theta": 0.3, "shock": {"garch": {"sd": 1, "alpha": 0.1, "beta": 0.8, "law": _T}}}}
-    ],
-    "lognormal": [{"exp": [{"ar": {"phi": 0.8, "total_sd": 0.3}}]}],
-    "integrated": [{"integrate": [{"ar": {"phi": 0.5, "sd": 1}}]}],
-    "differenced": [{"difference": {"of": [{"ar": {"phi": 0.5, "sd": 1}}]}}],
-    "product": [{"product": [{"ar": {"phi": 0.5, "sd": 1}}, {"exp": [{"ar": {"phi": 0.7, "sd": 0.1}, "as": "size"}]}]}],
-    "garch in noise": [{"garch": {"sd": 1, "alpha": 0.1, "beta": 0.8}}, {"ar": {"phi": 0.6, "sd": 1}}],
-    "several": {
-        "shared": {"w": [{"ar": {"phi": 0.8, "total_sd": 1}}]},
-        "series": {
-            "x": [{"use": "w", "times": 2}, {"white_noise": {"sd": 1}}],
-            "y": [{"use": "w"}, {"random_walk": {"sd": 0.3}}],
-            "z": [{"garch": {"sd": 1, "alpha": 0.1, "beta": 0.8}}],
-        },
-        "correlation": [{"between": ["x.white_noise", "z.garch"], "value": 0.5}],
-    },
-}
+LARGE = 400_000  # values of a series from which on a shape gets fewer runs
+FEWER = 10
+PIECE = 50  # seeds of one job
 
 
 @dataclass
@@ -80,7 +50,7 @@ class Tally:
         judged = [row for row in answer.rows if row.p is not None]
         adjusted = holm([row.p for row in judged])
         least = min(adjusted, default=1.0)
-        facts = any(row.outcome == "departs" and row.p is None for row in answer.rows)
+        facts = [row for row in answer.rows if row.outcome == "departs" and row.p is None]
         self.runs += 1
         for level in LEVELS:
             self.flagged[level] += bool(facts or least <= level)
@@ -89,7 +59,9 @@ class Tally:
             for tail in TAILS:
                 self.small[tail][row.what] += row.p <= tail
         if facts or least <= 1e-3:
-            self.lines += answer.headline[:1] or [judged[int(np.argmin(adjusted))].what]
+            worst = facts[0] if facts else judged[int(np.argmin(adjusted))]
+            p = "a fact" if worst.p is None else f"p {worst.p:.2g} of {len(judged)}"
+            self.lines.append(f"{worst.series}, {worst.what}, {worst.probe}: {p}; {worst.note}")
 
     def merge(self, other: Tally) -> None:
         self.runs += other.runs
@@ -99,71 +71,107 @@ class Tally:
             self.small[tail].update(counts)
         self.lines += other.lines
 
+    def to_dict(self) -> dict[str, Any]:
+        flat = {f"{tail:g}": dict(counts) for tail, counts in self.small.items()}
+        flagged = {f"{level:g}": int(count) for level, count in self.flagged.items()}
+        return {
+            "runs": self.runs, "flagged": flagged, "checks": dict(self.checks), "small": flat, "lines": self.lines,
+        }  # fmt: skip
+
+    @classmethod
+    def from_dict(cls, plain: Mapping[str, Any]) -> Tally:
+        tally = cls(plain["runs"], Counter(), Counter(plain["checks"]), lines=list(plain["lines"]))
+        tally.flagged.update({float(level): count for level, count in plain["flagged"].items()})
+        for tail, counts in plain["small"].items():
+            tally.small[float(tail)].update(counts)
+        return tally
+
 
 def run(family: str, shape: tuple[int, int], seeds: range) -> Tally:
-    """Judge true ensembles of one family and shape."""
+    """Judge true ensembles of one family and shape. Its theory is computed once for all seeds."""
     tally = Tally()
+    paths, steps = shape[0], min(shape[1], LONGEST.get(family, shape[1]))
+    body = stated(family, steps)
     for seed in seeds:
-        stated = FAMILIES[family]
-        tally.add(verdict(stated, draw(spec_of(stated, *shape, seed)), false_alarm=0.001))
+        tally.add(verdict(body, draw(spec_of(body, paths, steps, seed)), false_alarm=0.001))
+    tally.lines = [f"{family} {paths}×{steps}: {line}" for line in tally.lines]
     return tally
 
 
-def interval(count: int, runs: int, level: float = 0.999) -> tuple[float, float]:
-    """Clopper & Pearson (1934) interval of a share."""
-    from scipy.stats import beta
-
-    tail = (1 - level) / 2
-    low = beta.ppf(tail, count, runs - count + 1) if count else 0.0
-    high = beta.isf(tail, count + 1, runs - count) if count < runs else 1.0
-    return float(low), float(high)
-
-
 def jobs(seeds: int, only: str) -> Iterator[tuple[str, tuple[int, int], range]]:
-    for family in FAMILIES:
-        if only in family:
-            for k, shape in enumerate(SHAPES):
-                share = seeds // 20 if shape[0] * shape[1] >= 400_000 else seeds
-                yield family, shape, range(1000 * k + 1, 1000 * k + 1 + max(1, share // len(SHAPES)))
+    """Pieces of work: a tenth of the runs for every family, then the rest for those of OFTEN.
+
+    Large shapes get fewer seeds, and the small ones what is left of the family's runs.
+    """
+    large = [shape[0] * shape[1] >= LARGE for shape in SHAPES]
+    share = -(-seeds // (large.count(False) * FEWER + large.count(True)))
+    tenth = -(-share // 10)
+    for families, begin, end in ((FAMILIES, 0, tenth), (OFTEN, tenth, share)):
+        for family in families:
+            for k, shape in enumerate(SHAPES if only in family else ()):
+                times = 1 if large[k] else FEWER
+                for first in range(begin * times, end * times, PIECE):
+                    start = 1000 * k + 1
+                    yield family, shape, range(start + first, start + min(first + PIECE, end * times))
 
 
 def report(tallies: Mapping[str, Tally]) -> str:
-    lines = [f"{'family':18s} {'runs':>7s}" + "".join(f"{f'at {level:g}':>26s}" for level in LEVELS)]
+    """The tables in Markdown, and a line for each run flagged at 0.001."""
     total = Tally()
     for tally in tallies.values():
         total.merge(tally)
+    lines = ["| family | runs | " + " | ".join(f"at {level:g}" for level in LEVELS) + " |"]
+    lines.append("| --- " * (2 + len(LEVELS)) + "|")
     for name, tally in [*tallies.items(), ("all", total)]:
         cells = []
         for level in LEVELS:
             low, high = interval(tally.flagged[level], tally.runs)
             cells.append(f"{tally.flagged[level] / tally.runs:.4f} ({low:.4f}–{high:.4f})")
-        lines.append(f"{name:18s} {tally.runs:7d}" + "".join(f"{cell:>26s}" for cell in cells))
-    lines += [
-        "",
-        f"{'check':46s} {'n':>9s}"
-        + "".join(f"{f'p ≤ {tail:g}, of':>16s}" for tail in TAILS)
-        + "  (observed / expected)",
-    ]
+        lines.append(f"| {name} | {tally.runs:,} | " + " | ".join(cells) + " |")
+    lines += ["", "| check: observed / expected | n | " + " | ".join(f"p ≤ {tail:g}" for tail in TAILS) + " |"]
+    lines.append("| --- " * (2 + len(TAILS)) + "|")
     for what, count in sorted(total.checks.items()):
-        shares = "".join(f"{total.small[tail][what] / (tail * count):16.2f}" for tail in TAILS)
-        lines.append(f"{what:46s} {count:9d}{shares}")
-    return "\n".join([*lines, "", "flagged at 0.001:", *total.lines])
+        shares = " | ".join(f"{total.small[tail][what] / (tail * count):.2f}" for tail in TAILS)
+        lines.append(f"| {what} | {count:,} | {shares} |")
+    return "\n".join([*lines, "", "flagged at 0.001:", "", *(f"- {line}" for line in total.lines)])
+
+
+def _key(family: str, shape: tuple[int, int], seeds: range) -> str:
+    return f"{family}|{shape[0]}x{shape[1]}|{seeds.start}-{seeds.stop - 1}"
+
+
+def done(out: Path) -> dict[str, tuple[str, Tally]]:
+    """What a file of tallies holds: job -> its family and tally; a last line that was cut off is left out."""
+    found = {}
+    for line in out.read_text().splitlines() if out.exists() else []:
+        try:
+            plain = json.loads(line)
+        except json.JSONDecodeError:
+            continue
+        found[plain["job"]] = plain["family"], Tally.from_dict(plain)
+    return found
 
 
 def main() -> None:
     parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
-    parser.add_argument("--seeds", type=int, default=2000, help="runs a family, over all shapes")
-    parser.add_argument("--quick", action="store_true", help="20 runs a family")
+    parser.add_argument("--seeds", type=int, default=2000, help="runs of a family of OFTEN, over all shapes")
+    parser.add_argument("--quick", action="store_true", help="about 50 runs a family")
     parser.add_argument("--only", default="", help="families whose name contains this")
-    parser.add_argument("--workers", type=int, default=1)
+    parser.add_argument("--out", type=Path, help="a file that gets a line for each finished job")
+    parser.add_argument("--resume", action="store_true", help="leave out the jobs that --out already has")
     options = parser.parse_args()
-    seeds = 20 if options.quick else options.seeds
+    known = done(options.out) if options.out and options.resume else {}
+    if options.out and not options.resume:
+        options.out.write_text("")
     tallies: dict[str, Tally] = defaultdict(Tally)
-    with ProcessPoolExecutor(options.workers) as pool:
-        futures = [(job[0], pool.submit(run, *job)) for job in jobs(seeds, options.only)]
-        for family, future in futures:
-            tallies[family].merge(future.result())
-            print(f"\r{family:18s} {tallies[family].runs:6d}", end="", file=sys.stderr)
+    for job in jobs(50 if options.quick else options.seeds, options.only):
+        key = _key(*job)
+        tally = known[key][1] if key in known else run(*job)
+        if options.out and key not in known:
+            with options.out.open("a") as file:
+                file.write("\n" + json.dumps({"job": key, "family": job[0], **tally.to_dict()}))
+        tallies[job[0]].merge(tally)
+        print(f"\r{job[0]:24s} {tallies[job[0]].runs:6d}", end="", file=sys.stderr)
     print("", file=sys.stderr)
     print(report(tallies))
 

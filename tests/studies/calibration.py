@@ -1,0 +1,125 @@
+"""Whether the p-value of every kind of check is right on its own, far into the tail.
+
+    python tests/studies/calibration.py [--quick] [--only CASE] [--scale 1]
+
+Each case draws the sums that one kind of check receives, directly and under the theory, as often as its line says,
+and asks the check for p. Printed, for each level: p at most the level / expected, with the 99.9 % binomial interval.
+A check that says it is untestable at a level counts as not flagged there; "-" where it always says so.
+"""
+
+from __future__ import annotations
+
+import argparse
+import sys
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass
+from pathlib import Path
+from time import perf_counter
+
+import numpy as np
+from numpy.typing import NDArray
+
+sys.path.insert(0, str(Path(__file__).resolve().parents[2]))
+
+from procgen.checks.judge import Finding
+from tests.studies.intervals import interval
+
+LEVELS = (1e-2, 1e-3, 1e-4, 1e-5, 1e-6)
+_PLAIN = 2.0  # statistics nearer than this many standard errors are not judged: their p is far above 0.01
+_CHUNK = 4_000_000
+
+Findings = Callable[[np.random.Generator, int], Iterator[Finding]]
+
+
+@dataclass(frozen=True)
+class Case:
+    """One kind of check on one kind of numbers.
+
+    `draws` statistics are drawn in a full run. `of(rng, count)` gives the findings of `count` of them, those far from
+    p = 0.01 left out.
+    """
+
+    name: str
+    draws: int
+    of: Findings
+    size: int = 1  # numbers drawn for one statistic
+
+
+@dataclass
+class Counts:
+    """Of one case: statistics drawn, and at each level those with so small a p, and those that were testable."""
+
+    drawn: int
+    small: NDArray
+    testable: NDArray
+
+
+def run(case: Case, seed: int, scale: float = 1.0) -> Counts:
+    """Draw and count, in pieces that fit into memory."""
+    rng = np.random.default_rng(seed)
+    wanted = max(1, int(case.draws * scale))
+    counts = Counts(0, np.zeros(len(LEVELS), int), np.zeros(len(LEVELS), int))
+    while counts.drawn < wanted:
+        piece = min(wanted - counts.drawn, max(1, _CHUNK // case.size))
+        for finding in case.of(rng, piece):
+            open_ = np.array([finding.doubt(level) is None for level in LEVELS])
+            counts.testable += open_
+            counts.small += open_ & (finding.log_p <= np.log(LEVELS))
+        counts.drawn += piece
+    return counts
+
+
+def too_many(counts: Counts, chance: float) -> list[float]:
+    """Levels at which small p are more frequent than a right check shows but for this chance (over all levels)."""
+    from scipy.stats import binom
+
+    most = binom.isf(chance / len(LEVELS), counts.drawn, LEVELS)
+    return [level for level, count, top in zip(LEVELS, counts.small, most, strict=True) if count > top]
+
+
+def cells(counts: Counts) -> Iterator[str]:
+    for level, count, testable in zip(LEVELS, counts.small.tolist(), counts.testable.tolist(), strict=True):
+        if not testable:
+            yield "-"
+        elif level * counts.drawn < 3:
+            yield "·"
+        else:
+            low, high = (bound / level for bound in interval(count, counts.drawn))
+            yield f"{count / counts.drawn / level:.2f} ({low:.2f}–{high:.2f})"
+
+
+def table(rows: list[tuple[str, Counts]]) -> str:
+    """Markdown: observed / expected."""
+    lines = ["| check, numbers | statistics | " + " | ".join(f"{level:g}" for level in LEVELS) + " |"]
+    lines.append("| --- " * (2 + len(LEVELS)) + "|")
+    lines += [f"| {name} | {counts.drawn:,} | " + " | ".join(cells(counts)) + " |" for name, counts in rows]
+    return "\n".join(lines)
+
+
+def far(z: NDArray) -> NDArray[np.intp]:
+    """Places of the statistics that have to be judged."""
+    return np.flatnonzero(np.abs(z) > _PLAIN)
+
+
+def main() -> None:
+    from tests.studies.calibration_cases import CASES
+
+    parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
+    parser.add_argument("--quick", action="store_true", help="a hundredth of the draws")
+    parser.add_argument("--only", default="", help="cases whose name contains this")
+    parser.add_argument("--scale", type=float, default=1.0, help="draws, as a multiple of those of each case")
+    options = parser.parse_args()
+    rows = []
+    for seed, case in enumerate(CASES):
+        if options.only not in case.name:
+            continue
+        begun = perf_counter()
+        rows.append((case.name, run(case, seed, 0.01 if options.quick else options.scale)))
+        bad = too_many(rows[-1][1], 1e-3)
+        worst = f"  TOO MANY at {bad}" if bad else ""
+        print(f"{case.name}: {perf_counter() - begun:.1f} s{worst}", file=sys.stderr, flush=True)
+    print(table(rows))
+
+
+if __name__ == "__main__":
+    main()
