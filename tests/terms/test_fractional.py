@@ -15,6 +15,10 @@ from procgen.theory.fractional import Filtered, FractionalNoise, GaussianNoise
 
 from .helpers import draw, graph_of
 
+DERIVED = {
+    "arfima": "test_autocovariances_against_many_digits",
+    "fractional_gaussian_noise": "test_fractional_gaussian_noise_has_the_published_correlations",
+}
 LAGS = np.array([0, 1, 2, 3, 10, 100])
 
 

@@ -23,6 +23,10 @@ from procgen.theory import theory
 from .helpers import draw, graph_of, jacobian
 from .test_exact_covariance import STEPS, compare
 
+DERIVED = {
+    "local_level": "test_state_spaces_of_statsmodels",
+    "local_linear_trend": "test_state_spaces_of_statsmodels",
+}
 AIRLINE = "{arima: {d: 1, theta: -0.4, seasonal: {period: 12, d: 1, theta: -0.6}, sd: 1}}"
 SHORT = "{arima: {phi: 0.5, d: 1, theta: 0.3, seasonal: {period: 3, d: 1, theta: 0.2}, sd: 1}}"
 DUMMY = "{seasonal_random_walk: {period: 4, sd: 2, form: dummy, start: [1, -2, -3, 4]}}"

@@ -12,6 +12,10 @@ from procgen.theory import theory
 
 from .helpers import draw, graph_of, jacobian
 
+DERIVED = {
+    "vector_arma": "test_autocovariances_of_another_library",
+    "vector_error_correction": "test_covariance_of_what_is_drawn",
+}
 STEPS = 12
 # Lütkepohl (2005), New Introduction to Multiple Time Series Analysis, sec. 2.1.1 and 2.1.4.
 THREE = "names: [a, b, c], phi: [[0.5, 0, 0], [0.1, 0.1, 0.3], [0, 0.2, 0.3]], sd: [1.5, 1, 0.8602325267042627]"

@@ -59,7 +59,7 @@ def test_a_difference_of_a_walk_over_many_steps_is_quick_and_exact():
     start = time.process_time()
     x = theory_of("x: {difference: {of: [{random_walk: {sd: 1}}], by: 8000, order: 12}}")["x"]
     rho = x.autocorrelation(np.array([0, 8000, 95999, 96000]))
-    assert time.process_time() - start < 5.0  # on a busy machine; it took a minute there with a dictionary at a time
+    assert time.process_time() - start < 8.0  # on a busy machine; it took a minute there with a dictionary at a time
     ends = [1, -comb(22, 10) / comb(22, 11), -1 / (8000 * comb(22, 11)), 0]
     np.testing.assert_allclose(x.variance(5), 8000 * comb(22, 11), rtol=1e-12)
     np.testing.assert_allclose(rho, ends, rtol=1e-9, atol=1e-15)

@@ -33,6 +33,10 @@ BENT = {
     "product": ("{{product: [{{sum: {body}}}, {{constant: 3}}]}}", ()),
 }
 
+DERIVED = {name.partition(",")[0]: "test_functions_of_an_autoregression" for name in BENT} | {
+    "logit": "test_logit_of_a_random_body_is_unknown_and_undoes_a_sigmoid_of_a_known_one"
+}
+
 
 def of_body(graph, x):
     """What the value code of a series' last term makes of values of its bodies."""

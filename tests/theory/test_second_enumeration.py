@@ -83,6 +83,8 @@ CASES = {
         "  y: {ar: {phi: 0.5, sd: 1, law: quartet, before: {x: 1}}}", 4, 4, True),
 }  # fmt: skip
 
+DERIVED = {name.partition(",")[0]: "test_moments_over_all_sequences" for name in CASES}
+
 
 @pytest.mark.parametrize("name", CASES)
 def test_moments_over_all_sequences(name, monkeypatch):

@@ -90,6 +90,8 @@ KNOWN = {
     "holidays": ("holidays: {days: [2027-01-05, 12-25], size: -30, day_before: -8}", holiday),
 }  # fmt: skip
 
+DERIVED = {name.partition(",")[0]: "test_a_known_series_and_what_is_made_of_it" for name in KNOWN}
+
 
 def number(value):
     return mp.mpf(value.numerator) / value.denominator if isinstance(value, Fraction) else mp.mpf(value)

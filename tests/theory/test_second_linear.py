@@ -25,6 +25,14 @@ from .brute import coefficients
 from .exact import Autoregression, NotStationary, arma_autocovariances, running_sum_variance
 from .references import LAPLACE, NORMAL
 
+DERIVED = {
+    "arima": "test_seasonal_autoregression_near_its_unit_roots",
+    "ar": "test_drawn_models_of_high_order_near_and_far",
+    "ma": "test_high_orders_beside_statsmodels",
+    "arma": "test_drawn_models_of_high_order_near_and_far",
+    "ornstein_uhlenbeck": "test_ornstein_uhlenbeck",
+    "stochastic_cycle": "test_stochastic_cycle",
+}
 EPS = np.finfo(float).eps
 FAR = 10_000
 inner, edge = st.floats(-0.8, 0.8), st.floats(0.9, 0.99999).flatmap(lambda r: st.sampled_from([r, -r]))

@@ -17,6 +17,13 @@ from procgen.theory import theory
 
 from ..terms.helpers import graph_of
 
+DERIVED = {
+    "garch": "test_garch_of_any_order_up_to_where_its_fourth_moment_ends",
+    "arch": "test_variances_from_a_given_past_are_the_forecasts_of_arch",
+    "gjr_garch": "test_threshold_garch_of_symmetric_laws",
+    "egarch": "test_exponential_garch_by_products",
+    "stochastic_volatility": "test_stochastic_volatility_by_one_gaussian_exponent",
+}
 EPS = np.finfo(float).eps
 FAR = 10_000
 LAGS = np.array([0, 1, 2, 3, 40, FAR])
