@@ -16,7 +16,9 @@ from typing import Any
 from procgen.chance.laws import LAWS
 from procgen.report.catalogue import SHOCK, equation, example_spec, noises, purpose, rows
 from procgen.spec.declare import Parameter
+from procgen.spec.draws import DRAWS
 from procgen.spec.entries import walk
+from procgen.spec.groups import TEMPLATE
 from procgen.spec.model import Series, Shared, Spec
 from procgen.spec.reader import HEAD, SERIES, read_file
 from procgen.spec.timegrid import TIME
@@ -31,6 +33,8 @@ def rewritten(page: str, folder: Path) -> str:
         "keys": lambda: table(HEAD),
         "time": lambda: table(TIME),
         "series": lambda: table(SERIES),
+        "draws": draws,
+        "groups": lambda: table(TEMPLATE),
         "terms": terms,
         "laws": laws,
         "gallery": lambda: gallery(folder),
@@ -56,6 +60,15 @@ def terms() -> str:
             out.append(f"### {family.capitalize()}")
         out.append(_term(kind, term))
     return "\n\n".join(out)
+
+
+def draws() -> str:
+    """Every law that a parameter can be drawn from."""
+    out = []
+    for name, law in DRAWS.items():
+        out.append(f"- `{name}`: {law.purpose}.")
+        out += [f"  - `{p}` {s}: {d}; {rest}. {text}." for p, s, d, rest, text in rows(law.parameters)]
+    return "\n".join(out)
 
 
 def laws() -> str:

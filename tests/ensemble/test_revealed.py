@@ -79,8 +79,8 @@ def test_overwriting_removes_them_and_nothing_else(folder, tmp_path):
     out = tmp_path / "out"
     pg.render(RAW, out=out)
     (out / "tables" / "mine.txt").write_text("notes")
-    pg.render({**RAW, "groups": {"g": {"names": ["a"], "of": {"constant": 1}}}, "series": {"x": {"constant": 2}}}, out=out,
-              overwrite=True)  # fmt: skip
+    other = {"groups": {"g": {"names": ["a"], "of": {"constant": 1}}}, "series": {"x": {"constant": 2}}}
+    pg.render({**RAW, **other}, out=out, overwrite=True)
     assert sorted(file.name for file in (out / "tables").iterdir()) == ["mine.txt", "series.parquet"]
 
 
