@@ -114,15 +114,8 @@ def _split(a: np.ndarray, b: np.ndarray) -> tuple[np.ndarray, np.ndarray, float]
     """u, v (v_0 = 0) with u(z) b(1/z) + v(1/z) a(z) = 1, and the condition number of the system."""
     from scipy.linalg import lapack, lu_factor, lu_solve
 
-    behind, ahead = len(b) - 1, max(len(a) - 2, 0)  # highest powers of 1/z and z that occur
-    size = ahead + behind + 1
-    system = np.zeros((size, size))
-    for i in range(ahead + 1):  # u_i b_l stands at the power i - l
-        system[behind + i - np.arange(len(b)), i] = b
-    for m in range(1, behind + 1):  # v_m a_l stands at the power l - m
-        system[behind + np.arange(len(a)) - m, ahead + m] = a
-    one = np.zeros(size)
-    one[behind] = 1.0
+    system, one, ahead = _system(a, b)
+    size = len(system)
     factors = lu_factor(system)
     solution = lu_solve(factors, one)
     # One refinement with a long residual: it costs a product and removes most of the error of elimination.
@@ -133,12 +126,33 @@ def _split(a: np.ndarray, b: np.ndarray) -> tuple[np.ndarray, np.ndarray, float]
     if condition > HOPELESS and size > LARGEST_RATIONAL:
         raise Unknown(f"its coefficients are too near to a unit root (condition number {condition:.1g})")
     if condition > WEAK and size <= LARGEST_RATIONAL:
-        solution = _rational_solution(system, one)
+        solution = np.array([float(x) for x in _rational_solution(system, one)])
     return solution[: ahead + 1], np.concatenate([[0.0], solution[ahead + 1 :]]), condition
 
 
-def _rational_solution(system: np.ndarray, right: np.ndarray) -> np.ndarray:
-    """The solution in exact rational arithmetic, rounded once; for a small system near a unit root."""
+def rational_split(first: tuple[float, ...], second: tuple[float, ...]) -> tuple[list[Fraction], list[Fraction]]:
+    """Numerators of Gamma at lags from 0 on over phi of `first`, and below 0 over that of `second`, as they are."""
+    system, one, ahead = _system(polynomial(first), polynomial(second))
+    solution = _rational_solution(system, one)
+    return solution[: ahead + 1], [Fraction(0), *solution[ahead + 1 :]]
+
+
+def _system(a: np.ndarray, b: np.ndarray) -> tuple[np.ndarray, np.ndarray, int]:
+    """The linear system of u and v, its right side, and the degree of u."""
+    behind, ahead = len(b) - 1, max(len(a) - 2, 0)  # highest powers of 1/z and z that occur
+    size = ahead + behind + 1
+    system = np.zeros((size, size))
+    for i in range(ahead + 1):  # u_i b_l stands at the power i - l
+        system[behind + i - np.arange(len(b)), i] = b
+    for m in range(1, behind + 1):  # v_m a_l stands at the power l - m
+        system[behind + np.arange(len(a)) - m, ahead + m] = a
+    one = np.zeros(size)
+    one[behind] = 1.0
+    return system, one, ahead
+
+
+def _rational_solution(system: np.ndarray, right: np.ndarray) -> list[Fraction]:
+    """The solution in exact rational arithmetic; for a small system near a unit root."""
     rows = [[Fraction(x) for x in (*row, b)] for row, b in zip(system.tolist(), right.tolist(), strict=True)]
     size = len(rows)
     for i in range(size):
@@ -152,7 +166,7 @@ def _rational_solution(system: np.ndarray, right: np.ndarray) -> np.ndarray:
             if r != i and rows[r][i]:
                 factor = rows[r][i]
                 rows[r] = [x - factor * y for x, y in zip(rows[r], rows[i], strict=True)]
-    return np.array([float(row[-1]) for row in rows])
+    return [row[-1] for row in rows]
 
 
 def spectral_radius(phi: tuple[float, ...]) -> float:

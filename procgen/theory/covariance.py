@@ -2,18 +2,25 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from functools import lru_cache
 
 import numpy as np
 
-from procgen.theory.arma import CrossCovariance, cross_covariance
+from procgen.theory import longhand
+from procgen.theory.arma import WEAK, CrossCovariance, cross_covariance
 from procgen.theory.linear import At, Base, Linear, Season, Sum, base_of
 from procgen.theory.processes import mixed
 from procgen.theory.sources import PROCESS, Space
 from procgen.theory.system import LARGEST_STATE, state_size, system_of
+from procgen.theory.unknown import Unknown
 from procgen.theory.weights import covariance_by_weights
 
 SPARSE = 256  # so many pairs of delays are multiplied one by one
+CANCELLED = 1e4  # a sum smaller than its parts by this much has lost digits that count
+NOTHING_LEFT = 1e11  # and by this much, all of them
+Of = Callable[[np.ndarray], np.ndarray]
+Delays = tuple[Base, dict[int, float]]
 DIRECT = 10**8  # up to so many products a convolution is added up as such
 
 
@@ -64,7 +71,7 @@ def _plain(space: Space, x: Linear, y: Linear, t: np.ndarray, s: np.ndarray) -> 
                 continue
             gamma = cross_covariance(a.phi, b.phi)
             by, weights = _shifts_between(x, a, y, b)
-            total += _summed(gamma, t - s, by, scale * weights)
+            total += scale * _kept_digits(gamma, (a, delays_a), (b, delays_b), t - s, by, weights)
             for back, weight in frozen_b.items():
                 for delay, c in delays_a.items():
                     total += (scale * weight * c) * gamma(t - delay + back)
@@ -76,7 +83,27 @@ def _plain(space: Space, x: Linear, y: Linear, t: np.ndarray, s: np.ndarray) -> 
     return total
 
 
-def _summed(gamma: CrossCovariance, gaps: np.ndarray, by: np.ndarray, weights: np.ndarray) -> np.ndarray:
+def _kept_digits(
+    gamma: CrossCovariance, x: Delays, y: Delays, gaps: np.ndarray, by: np.ndarray, weights: np.ndarray
+) -> np.ndarray:
+    """The same sum, in whole numbers where it cancels near a unit root."""
+    found = _summed(gamma, gaps, by, weights)
+    if gamma.condition <= WEAK or len(by) == 1 or not found.size:
+        return found
+    size = float(_summed(lambda lags: np.abs(gamma(lags)), gaps, by, np.abs(weights)).max())
+    left = float(np.abs(found).max())
+    if size <= CANCELLED * left:
+        return found
+    (a, delays), (b, others) = x, y
+    distinct, which = np.unique(gaps, return_inverse=True)
+    if not longhand.can_sum(a.phi, b.phi, len(delays) * len(others), distinct, int(np.abs(by).max())):
+        if size > NOTHING_LEFT * left:
+            raise Unknown(f"its digits cancel near a unit root (condition number {gamma.condition:.1g})")
+        return found
+    return longhand.summed(a.phi, b.phi, delays, others, distinct)[which].reshape(gaps.shape)
+
+
+def _summed(gamma: Of, gaps: np.ndarray, by: np.ndarray, weights: np.ndarray) -> np.ndarray:
     """The sum over shifts `by` of their weights times Gamma(gap + shift)."""
     if len(by) <= SPARSE:
         total = np.zeros(gaps.shape)

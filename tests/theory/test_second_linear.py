@@ -133,6 +133,26 @@ def test_differences(kappa, by, order):
     assert close(x.autocovariance(np.arange(30)), exact, x.condition)
 
 
+@pytest.mark.parametrize(
+    ("roots", "order"), [([0.99999, 0.5], 2), ([0.9999] * 2, 2), ([0.999, 0.999, 0.9], 3), ([0.9999] * 3, 3)]
+)
+def test_differences_near_unit_roots_keep_their_digits(roots, order):
+    """What is left is 1e-6 to 1e-21 of the series: rounded autocovariances would leave nothing of it."""
+    phi = tuple(-np.poly(roots)[1:])
+    x = SeriesTheory("x", series(phi).expression.difference(1, order))
+    theta = [(-1) ** k * comb(order, k) for k in range(1, order + 1)]
+    exact = [float(v) for v in arma_autocovariances(phi, theta, 0, 60)]
+    np.testing.assert_allclose(x.autocovariance(np.arange(60)), exact, rtol=0, atol=1e-12 * exact[0])
+    assert x.excess_kurtosis == 0.0
+
+
+def test_what_cancels_beyond_help_is_unknown():
+    """A triple root near 1 and 20 other roots: too large a system for whole numbers."""
+    phi = tuple(-np.poly([0.999] * 3 + [0.3, -0.3] * 10)[1:])
+    x = SeriesTheory("x", series(phi).expression.difference(1, 3))
+    assert x.variance(0) is None and "unit root" in x.reason("variance")
+
+
 @settings(max_examples=15, deadline=None, derandomize=True)
 @given(st.lists(st.floats(-0.9, 0.9), min_size=1, max_size=5), st.lists(st.floats(-1.5, 1.5), max_size=4))
 def test_kurtosis_and_squares_of_filtered_shocks(kappa, theta):
