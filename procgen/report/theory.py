@@ -108,9 +108,11 @@ def _memory(theory: SeriesTheory, facts: dict[str, Any]) -> list[str]:
 
 
 def _remembers(facts: dict[str, Any]) -> bool:
-    """Whether anything is left of a value at later steps."""
-    values = facts["autocovariance"]["values"]
-    return values is not None and any(abs(v) > DUST * values[0] for v in values[1:])
+    """Whether anything is left of a value at later steps: at the lags that are shown, or for a forecast."""
+    values, errors = facts["autocovariance"]["values"], facts["forecast_variance"]["values"]
+    if values is None:
+        return False
+    return any(abs(v) > DUST * values[0] for v in values[1:]) or (errors or values)[0] < (1.0 - NOTHING) * values[0]
 
 
 def _spectrum(facts: dict[str, Any]) -> list[str]:

@@ -62,6 +62,8 @@ def test_memory_forecasts_and_means_are_printed_where_there_is_memory():
     assert "    1 ▃\n      █▇▄▂\n      █████▆▅▄▃▃▂▂▁▁▁▁▁\n    0 ────┴────┴" in text
     noise = text_of({"white_noise": {"sd": 1}})
     assert not any(word in noise for word in ("steps ahead", "steps averaged", "half-life", "┴", "partial"))
+    late = {"d": 0, "seasonal": {"period": 60, "phi": 0.5}, "sd": 1}
+    assert "error variance 1 1 1" in " ".join(text_of({"arima": late}).split())  # nothing at the lags that are shown
     walk = text_of({"random_walk": {"sd": 1}})
     assert "steps ahead" in walk and "steps averaged" not in walk and "┴" not in walk
 
