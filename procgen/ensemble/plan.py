@@ -66,9 +66,18 @@ def chains(whole: Block, row_bytes: int, workers: int = 1) -> tuple[Chain, ...]:
         count = max(count, workers)
         if count < 4 * workers:
             count = -(-count // workers) * workers
-    grain = CELL if whole.paths >= CELL * count else LANES
-    ranges = _spread(whole.first_path, whole.paths, count, grain)
+    ranges = _spread(whole.first_path, whole.paths, count, _grain(whole.paths, count))
     return tuple(tuple(_steps(whole, first, paths, steps)) for first, paths in ranges)
+
+
+def _grain(paths: int, count: int) -> int:
+    """Where to cut into so many parts: at cells, or as coarse as leaves a part four times that; sums go by halves."""
+    if paths >= CELL * count:
+        return CELL
+    grain = LANES
+    while 8 * grain * count <= paths:
+        grain *= 2
+    return grain
 
 
 def _part_shape(whole: Block, row_bytes: int) -> tuple[int, int]:
