@@ -167,6 +167,19 @@ def test_stated_quantiles_are_exact_or_said_not_to_be():
     assert found is None and "no finite mean" in reason
 
 
+def test_laws_over_drawn_parameters_are_exact_at_a_few_steps_and_joined_between():
+    raw = {"procgen": 1, "seed": 1, "paths": 5, "time": {"steps": 100}, "series": {}}
+    drawn = {"draw": {"uniform": [0.5, 2]}, "over": "path"}
+    raw["series"]["x"] = [{"trend": {"level": 0, "slope": 1}}, {"white_noise": {"sd": drawn}}]
+    theory = pg.theory(pg.load(raw))["x"]
+    found, kind = Stated(theory, 100).quantiles(np.arange(100), (0.05, 0.5, 0.95))
+    assert kind == "exact at 12 steps"
+    # P(x ≤ q) = mean of Φ(q/s) over s, by a fine grid of s.
+    spread = np.linspace(0.5, 2, 20_001)
+    assert np.mean(stats.norm.cdf((found[2, 50] - 50) / spread)) == pytest.approx(0.95, abs=1e-5)
+    assert found[1] == pytest.approx(np.arange(100), abs=1e-6)
+
+
 def test_what_may_be_pooled():
     assert stated({"seasonal": {"period": 12, "harmonics": [{"amplitude": 1}]}}, {"white_noise": {"sd": 1}}).steady
     walk = stated({"random_walk": {"sd": 1}})

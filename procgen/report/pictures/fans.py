@@ -14,6 +14,7 @@ from procgen.report.pictures.chart import Axis, Band, Cells, Chart, Line, Mark, 
 from procgen.report.pictures.safe import short
 from procgen.report.pictures.sample import Sample
 from procgen.report.pictures.seen import quantiles
+from procgen.report.pictures.stated import TWO_SD
 from procgen.report.pictures.subject import LEVELS, Subject, some, texts
 from procgen.report.pictures.ticks import axis, step_axis
 
@@ -147,14 +148,14 @@ def _blocks(values: NDArray, states: int, lane: int) -> NDArray:
 
 def _bands(at: NDArray, stated: NDArray, kind: str) -> list[Mark]:
     marks: list[Mark] = [Band(at, stated[0], stated[-1], "stated", _band_name(kind))]
-    if kind == "exact":
+    if kind != TWO_SD:
         marks.append(Band(at, stated[1], stated[3], "stated", "and 50 %", core=True))
-    marks.append(Line(at, stated[2], "stated", "stated median" if kind == "exact" else "stated mean"))
+    marks.append(Line(at, stated[2], "stated", "stated mean" if kind == TWO_SD else "stated median"))
     return marks
 
 
 def _band_name(kind: str) -> str:
-    return "stated 90 %" if kind == "exact" else "stated mean ± 2 sd"
+    return "stated mean ± 2 sd" if kind == TWO_SD else "stated 90 %"
 
 
 def _paths(count: int) -> str:
@@ -170,7 +171,11 @@ def _caption(subject: Subject, stated: NDArray | None, kind: str, values: NDArra
     percent = 100.0 * inside.sum() / max(int(known.sum()), 1)
     if subject.stated.still:
         return f"Nothing is left to chance: {percent:.4g} % of the values of {subject.whose()} are the stated ones."
-    band = "the stated 90 % band" if kind == "exact" else "mean ± 2 sd (its quantiles have no closed form)"
+    band = "the stated 90 % band"
+    if kind == TWO_SD:
+        band = "mean ± 2 sd (its quantiles have no closed form)"
+    elif kind != "exact":
+        band += f" (which is {kind}, and standardised values of it are joined between)"
     return f"{percent:.1f} % of the values of {subject.whose()} at these steps lie within {band}."
 
 

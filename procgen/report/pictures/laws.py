@@ -74,7 +74,7 @@ def density(subject: Subject) -> Chart | None:
     if subject.stated.still:
         return None
     look = _Look(subject)
-    values, grain = look.values, grain_of(look.values, subject.grain)
+    values, grain = look.values, 0.0 if look.shift else grain_of(look.values, subject.grain)
     edges, heights = histogram(values, grain)
     x = np.linspace(edges[0], edges[-1], CURVE + 1)
     curve, name = look.curve(x)
