@@ -120,6 +120,14 @@ class Garch:
             return True, "alpha + beta sums to 1 and the law has no atoms (Bougerol & Picard 1992)"
         return None, "alpha + beta sums to more than 1: at this order the top Lyapunov exponent has no closed form"
 
+    @property
+    def condition(self) -> float:
+        """What rounding is multiplied by: in the variance near an end of it, in fourth moments near theirs."""
+        near = [1.0 - self.total]
+        if np.isfinite(self.shock_variance):
+            near.append(1.0 - (self.law.excess_kurtosis + 2.0) * self.spread)
+        return max((1.0 / abs(x) for x in near if x), default=1.0)
+
     @cached_property
     def orders(self) -> tuple[float, float]:
         """All moments below the first order exist, none from the second on (inf: not known); equal where exact.

@@ -206,7 +206,8 @@ class SeriesTheory:
     def condition(self) -> float:
         """Condition number behind the autocovariances: relative errors are about 1e-16 times it."""
         forms = [f for term, _ in self.expression.parts for f in (*term.factors, term.exponent)]
-        return max((condition(form) for form in forms), default=1.0)
+        details = (getattr(source.detail, "condition", 1.0) for source in self.expression.sources)
+        return max((*(condition(form) for form in forms), *details), default=1.0)
 
     def reason(self, name: str) -> str | None:
         """Why the last answer of that name was None; None when it was not."""

@@ -38,6 +38,11 @@ class Volatility:
     started = False
 
     @property
+    def condition(self) -> float:
+        """What rounding is multiplied by in its moments, near where one of them ends."""
+        return 1.0 / abs(1.0 - self.total) if self.total != 1.0 else 1.0
+
+    @property
     def power_tailed(self) -> bool:
         """Whether its exponential is known to have no finite mean."""
         return bool(np.isfinite(self.highest_moment))
@@ -180,6 +185,11 @@ class Gjr(Volatility):
         rest = self.omega / (1.0 - self.total)
         with np.errstate(over="ignore"):
             return rest + (self.first - rest) * self.total**steps
+
+    @property
+    def condition(self) -> float:
+        near = (1.0 - self.total, 1.0 - self.second)
+        return max((1.0 / abs(x) for x in near if x and np.isfinite(x)), default=1.0)
 
     @property
     def led(self) -> float:

@@ -13,7 +13,8 @@ from arch import arch_model
 from hypothesis import assume, given, settings
 from hypothesis import strategies as st
 
-from procgen.theory import theory
+from procgen.chance.laws import LAWS as LAWS_OF_OURS
+from procgen.theory import Axis, SeriesTheory, theory
 
 from ..terms.helpers import graph_of
 
@@ -108,6 +109,23 @@ def test_garch_of_any_order_up_to_where_its_fourth_moment_ends(model, law):
     found = x.autocovariance_of_squares(LAGS)
     np.testing.assert_allclose(found, [float(v) for v in squares], rtol=10 * allowed, atol=1e-12 * float(squares[0]))
     np.testing.assert_array_equal(x.autocovariance(LAGS)[1:], 0.0)
+
+
+def test_the_condition_number_is_told_near_the_end_of_a_moment():
+    """Of the variance and of the fourth moment of order (1,1), from the exact values of the coefficients."""
+    axis, normal = Axis(), LAWS_OF_OURS["normal"]()
+    near = SeriesTheory("x", axis.garch("x.garch", normal, 1.0, (0.1,), (0.8999999,)))
+    beta = float(np.sqrt(1 - 2 * 0.04 - 1e-7)) - 0.2
+    fourth = SeriesTheory("y", axis.garch("y.garch", normal, 1.0, (0.2,), (beta,)))
+    far = SeriesTheory("z", axis.gjr_garch("z.gjr_garch", normal, 1.0, 0.05, 0.1, 0.7))
+    with mp.workdps(40):
+        error = abs(mp.mpf(float(near.variance(0))) * (1 - mp.mpf(0.1) - mp.mpf(0.8999999)) - 1)
+        a, b = mp.mpf(0.2), mp.mpf(beta)
+        kurtosis = 3 * (1 - (a + b) ** 2) / (1 - (a + b) ** 2 - 2 * a**2)  # Bollerslev (1986)
+        off = abs(mp.mpf(fourth.excess_kurtosis + 3) / kurtosis - 1)
+    assert error <= 100 * EPS * near.condition and off <= 100 * EPS * fourth.condition
+    assert near.as_dict([0], 2)["condition"] > 9e6 and fourth.as_dict([0], 2)["condition"] > 5e5
+    assert "condition" not in far.as_dict([0], 2) and far.condition < 50
 
 
 @settings(max_examples=12, deadline=None, derandomize=True)
