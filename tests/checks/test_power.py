@@ -1,0 +1,74 @@
+"""The size that a check says it finds 9 times in 10 is found about that often; departures in composed specs are named.
+
+Quick modes of tests/studies/power.py and tests/studies/departures.py. Seeds are fixed.
+"""
+
+import numpy as np
+import pytest
+from scipy import stats
+
+from procgen.checks import power
+from tests.studies import composed, departures
+from tests.studies import power as study
+
+SEEDS = 150
+QUICK = [
+    plant
+    for plant in study.PLANTS
+    if plant.what in ("shocks: variance", "shocks: distribution function", "shocks: neighbouring paths")
+    and plant.stated == study.noise()
+]
+
+
+@pytest.mark.parametrize("plant", QUICK, ids=lambda plant: plant.what)
+def test_a_printed_size_is_found_nine_times_in_ten(plant):
+    # Of 150 seeds at a true share of 0.9, fewer than 108 or all are found with probability below 5e-7 (SciPy).
+    assert stats.binom.cdf(107, SEEDS, 0.9) + stats.binom.sf(SEEDS - 1, SEEDS, 0.9) < 5e-7
+    _, hits, runs = study.caught(plant, range(1, SEEDS + 1), paths=80, steps=60)
+    assert runs == SEEDS
+    assert 108 <= hits < SEEDS
+
+
+def test_half_the_size_is_not_found_nine_times_in_ten():
+    # The study can fail: half the size lies more than one standard error below the point that p must pass.
+    (plant,) = [plant for plant in QUICK if plant.what == "shocks: variance"]
+    halved = study.Plant(plant.what, plant.probe, plant.stated, lambda d, *at: plant.plant(d / 2, *at))
+    _, hits, _ = study.caught(halved, range(1, 41), paths=80, steps=60)
+    assert hits < 20
+
+
+def test_a_gap_is_the_one_that_kolmogorovs_test_finds():
+    # A shift of a normal law by d has the gap 2 Φ(d/2) − 1; the share of samples by NumPy, their p by SciPy.
+    n, level, runs = 1000, 1e-3, 1000
+    shift = 2 * stats.norm.ppf((1 + power.gap(level, n)) / 2)
+    z = np.sort(np.random.default_rng(5).standard_normal((runs, n)) + shift, axis=1)
+    u = stats.norm.cdf(z)
+    at = np.arange(n)
+    distance = np.maximum(u - at / n, (at + 1) / n - u).max(axis=1)
+    share = np.mean(stats.kstwo.sf(distance, n) <= level)
+    assert 0.85 < share < 0.95  # five standard errors of a share of 0.9
+
+
+NAMED = (
+    "trend slope doubled",
+    "daily peak one step late",
+    "period 24 drawn as 25",
+    "factor weight −3 drawn as 3",
+    "arma sign of θ",
+    "decimals 2 drawn as 4",
+    "ma sign of θ",
+    "law t(7) drawn as normal",
+    "garch drawn as white noise",
+    "correlation sign",
+    "event ten steps late",
+    "gamma shape 2.0 drawn as 2.2",
+)
+
+
+@pytest.mark.parametrize("name", NAMED)
+def test_a_departure_in_one_term_is_found_and_named(name):
+    # At 600 × 400 each of these moves its sharpest check by more than ten standard errors: missed below 1e-9.
+    (case,) = [case for case in composed.CASES if case.name == name]
+    verdict = departures.planted(case, 11, paths=600, steps=400)
+    assert verdict.agrees is False
+    assert departures.named(case, verdict), verdict.headline
