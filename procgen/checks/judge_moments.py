@@ -231,7 +231,8 @@ def _pooled_one(plan: SeriesPlan, pool: Pool, k: int, lag: int, sample: Sample) 
         variance = float(pool.covariance[0].mean())
         slope = float(np.nanmean(pool.slope[k - 1]))
         return _limit(plan, "slope over steps", probe, kind, sample.scaled(1 / variance), slope, 2, None)
-    return _limit(plan, what, probe, kind, sample, theory, 1 if lag < 0 else 2, pool.square_sd if lag == 0 else None)
+    sd = plan.square_sd if lag == 0 and sample.n >= FEW_PATHS else None
+    return _limit(plan, what, probe, kind, sample, theory, 1 if lag < 0 else 2, sd)
 
 
 def _neighbours(plan: SeriesPlan, powers: Powers) -> Iterator[Check]:

@@ -5,8 +5,10 @@ All numbers of theory are computed before the data are read. What theory does no
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
+from functools import cached_property
 from typing import Any
 
 import numpy as np
@@ -86,6 +88,23 @@ class SeriesPlan:
             self._skewness[order] = max(map(abs, found), default=0.0)
         return self._skewness[order]
 
+    @cached_property
+    def square_sd(self) -> float | None:
+        """Standard deviation of a path's average square over the pool, where moments do not depend on the step.
+
+        Only asked for when there are paths enough: it takes all covariances of squares over the window.
+        """
+        pool = self.pool
+        if pool is None or not self.theory.stationarity.covariance_stationary or not self.highest > 4:
+            return None
+        width = pool.last - pool.first
+        squares = self.theory.autocovariance_of_squares(np.arange(width), pool.first)
+        if squares is None:
+            return None
+        later = float(np.sum((width - np.arange(1, width)) * squares[1:]))
+        variance = (width * float(squares[0]) + 2 * later) / width**2
+        return math.sqrt(variance) if variance > 0 else None
+
     def too_coarse(self, sd: float) -> str:
         return f"rounded to {self.grain:g}, too coarse against a standard deviation of {sd:.3g}"
 
@@ -105,7 +124,6 @@ class Pool:
     covariance: NDArray  # (lags, window): Cov(x(t), x(t - lag)), NaN where t - lag lies before the window
     exact: NDArray | None = None  # (1 + lags, window): eigenvalues of each average, where its law is exact
     slope: NDArray | None = None  # (lags, window): of x(t) on x(t - lag), where there is no exact law
-    square_sd: float | None = None  # standard deviation of a path's average square, where it is known
     coarse: str = ""  # why rounding leaves the averages without a theory
 
 
@@ -238,7 +256,6 @@ def _pool(plan: SeriesPlan, steps: int) -> Pool | None:
         for slope, row, lag in zip(pool.slope, rows, lags, strict=True):
             earlier = rows[0, : width - lag]
             np.divide(row[lag:], earlier, out=slope[lag:], where=earlier > 0)
-        pool.square_sd = _square_sd(plan, first, width)
     return pool
 
 
@@ -247,17 +264,6 @@ def _coarse_window(plan: SeriesPlan, first: int, smallest: float) -> str:
     inside = plan.coarse & (plan.steps >= first)
     hidden = plan.gaussian and plan.grain > rounding.GAUSSIAN_COARSE * smallest
     return plan.too_coarse(smallest) if hidden or inside.any() else ""
-
-
-def _square_sd(plan: SeriesPlan, first: int, width: int) -> float | None:
-    """Of the average squared deviation over the window, for a series whose moments do not depend on the step."""
-    if not plan.theory.stationarity.covariance_stationary or not plan.highest > 4:
-        return None
-    squares = plan.theory.autocovariance_of_squares(np.arange(width), first)
-    if squares is None:
-        return None
-    variance = (width * squares[0] + 2 * float(np.sum((width - np.arange(1, width)) * squares[1:]))) / width**2
-    return float(np.sqrt(variance)) if variance > 0 else None
 
 
 def _rounding(grain: float) -> float:

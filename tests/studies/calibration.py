@@ -28,15 +28,16 @@ LEVELS = (1e-2, 1e-3, 1e-4, 1e-5, 1e-6)
 _PLAIN = 2.0  # statistics nearer than this many standard errors are not judged: their p is far above 0.01
 _CHUNK = 4_000_000
 
-Findings = Callable[[np.random.Generator, int], Iterator[Finding]]
+Findings = Callable[[np.random.Generator, int], Iterator[tuple[Finding, int]]]
+Draws = Callable[[np.random.Generator, int], NDArray]
 
 
 @dataclass(frozen=True)
 class Case:
     """One kind of check on one kind of numbers.
 
-    `draws` statistics are drawn in a full run. `of(rng, count)` gives the findings of `count` of them, those far from
-    p = 0.01 left out.
+    `draws` statistics are drawn in a full run. `of(rng, count)` gives the findings of `count` of them, and how often
+    each came; those far from p = 0.01 are left out.
     """
 
     name: str
@@ -61,10 +62,10 @@ def run(case: Case, seed: int, scale: float = 1.0) -> Counts:
     counts = Counts(0, np.zeros(len(LEVELS), int), np.zeros(len(LEVELS), int))
     while counts.drawn < wanted:
         piece = min(wanted - counts.drawn, max(1, _CHUNK // case.size))
-        for finding in case.of(rng, piece):
+        for finding, times in case.of(rng, piece):
             open_ = np.array([finding.doubt(level) is None for level in LEVELS])
-            counts.testable += open_
-            counts.small += open_ & (finding.log_p <= np.log(LEVELS))
+            counts.testable += times * open_
+            counts.small += times * (open_ & (finding.log_p <= np.log(LEVELS)))
         counts.drawn += piece
     return counts
 
@@ -99,6 +100,37 @@ def table(rows: list[tuple[str, Counts]]) -> str:
 def far(z: NDArray) -> NDArray[np.intp]:
     """Places of the statistics that have to be judged."""
     return np.flatnonzero(np.abs(z) > _PLAIN)
+
+
+def of_one_number(draw: Draws, judged: Callable[[float], Finding], centre: float, sd: float) -> Findings:
+    """Findings of a check that reads one number only: it is asked for p at the edge of each level, not at each draw."""
+    edges: list[list[tuple[float, Finding]]] = []
+
+    def findings(rng: np.random.Generator, count: int) -> Iterator[tuple[Finding, int]]:
+        if not edges:
+            edges.extend([list(_edges(judged, centre, sign * sd)) for sign in (1, -1)])
+        off = draw(rng, count) - centre
+        for sign, side in zip((1, -1), edges, strict=True):
+            beyond = [int(np.count_nonzero(sign * off >= distance)) for distance, _ in side] + [0]
+            for k, (_, finding) in enumerate(side):
+                yield finding, beyond[k] - beyond[k + 1]
+
+    return findings
+
+
+def _edges(judged: Callable[[float], Finding], centre: float, sd: float) -> Iterator[tuple[float, Finding]]:
+    """How far from the centre, towards the sign of sd, p falls to each level; where it never does, no more."""
+    low = 0.0
+    for level in np.log(LEVELS):
+        high = low + 1.0
+        while judged(centre + high * sd).log_p > level:
+            high += 1.0
+            if high > 60:
+                return
+        for _ in range(30):
+            middle = 0.5 * (low + high)
+            low, high = (middle, high) if judged(centre + middle * sd).log_p > level else (low, middle)
+        yield high * abs(sd), judged(centre + high * sd)
 
 
 def main() -> None:
