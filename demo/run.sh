@@ -31,18 +31,18 @@ echo "... (all of it: $out/theory.txt)"
 say "2. 2,000 paths of 2,000 hours: procgen render demo/island.yaml -o $out/island"
 $procgen render demo/island.yaml -o "$out/island"
 
-say "3. Do the paths follow the spec? procgen validate $out/island"
-expect 0 $procgen validate "$out/island" > "$out/verdict.txt"
+say "3. Do the paths follow the spec? procgen validate $out/island --report $out/verdict.html"
+expect 0 $procgen validate "$out/island" --report "$out/verdict.html" > "$out/verdict.txt"
 sed -n '1,4p' "$out/verdict.txt"
 echo "... (all of it: $out/verdict.txt)"
 
 say "4. A spec with faults: procgen theory demo/fault.yaml"
 expect 2 $procgen theory demo/fault.yaml 2>&1
 
-say "5. A copy with one series changed: procgen validate $out/tampered"
+say "5. A copy with one series changed: procgen validate $out/tampered --report $out/refused.html"
 cp -R "$out/island" "$out/tampered"
 .venv/bin/python demo/tamper.py "$out/tampered" water_m3
-expect 1 $procgen validate "$out/tampered" > "$out/refused.txt"
+expect 1 $procgen validate "$out/tampered" --report "$out/refused.html" > "$out/refused.txt"
 sed -n '1,16p' "$out/refused.txt"
 echo "... (all of it: $out/refused.txt)"
 
@@ -51,6 +51,6 @@ cat <<END
 Theory, paths and verdict agree for demo/island.yaml; the faulty spec and the tampered copy were refused.
   $out/theory.txt     what the spec implies: equations, means, variances, correlations
   $out/island/        the paths (Parquet, long layout) and manifest.json
-  $out/verdict.txt    the verdict on the paths
-  $out/refused.txt    the verdict on the tampered copy
+  $out/verdict.txt    the verdict on the paths; verdict.html is a page with pictures, for a browser
+  $out/refused.txt    the verdict on the tampered copy; refused.html likewise
 END
