@@ -28,7 +28,7 @@ from procgen.theory.sources import Source, Space
 from procgen.theory.unknown import Unknown
 
 VANISHES = 1e-11  # of the sum of absolute coefficients: a polynomial is 0 there
-SETTLED = 1e-12
+SETTLED = 1e-11
 MOST_POINTS = 1 << 20
 HIGHEST_DEGREE = 6_000
 
@@ -55,6 +55,8 @@ def wold(space: Space, form: Linear) -> tuple[float, Ratio]:
     Raises Unknown where a root of the joint numerator is too near to the unit circle.
     """
     units, phis, by_source = _common(form)
+    if not by_source:  # all that is left is known for ever
+        return 0.0, Ratio(np.ones(1), np.ones(1))
     extra: list[np.ndarray] = []
     for order in _vanishing(list(by_source.values())):
         while _all_vanish(by_source.values(), order):
@@ -189,7 +191,7 @@ def _factored(space: Space, numerators: dict[Source, np.ndarray]) -> tuple[float
         if before is not None and np.abs(found - before).max() <= SETTLED * np.abs(found).max():
             return float(found[0]), found[1:] / found[1]
         before, points = found, 2 * points
-    raise Unknown("its moving average has roots too near to the unit circle: its one-step form does not settle")
+    raise Unknown("its one-step form has roots so near to the unit circle that a filter would take too long to settle")
 
 
 def _invertible(numerator: np.ndarray) -> np.ndarray | None:

@@ -250,9 +250,15 @@ def test_reasons_and_refusals():
             "price": [{"exp": [{"ar": {"phi": 0.5, "sd": 1}}]}],
             "heavy": [{"garch": {"omega": 1, "alpha": 0.5, "beta": 0.6, "allow_infinite_variance": True}}],
             "twice": [{"ar": {"phi": 0.5, "sd": 1}}],
+            "drifting": [
+                {"seasonal_random_walk": {"period": 500, "form": "dummy", "sd": 0.01}},
+                {"white_noise": {"sd": 1}},
+            ],
         }
     )
-    price, twice = whole["price"], whole["twice"]
+    price, twice, drifting = whole["price"], whole["twice"], whole["drifting"]
+    assert drifting.forecast_variance([1]) is None and "too long to settle" in drifting.reason("forecast_variance")
+    assert drifting.forecast_variance([1], given="parts") is not None
     assert price.forecast_variance([1]) is None and "no sum of linear recursions" in price.reason("forecast_variance")
     assert whole["heavy"].forecast_variance([1]) is None
     assert "infinite variance" in whole["heavy"].reason("forecast_variance")
