@@ -62,7 +62,7 @@ class Jumps:
 
             def sf(self, x):
                 y = self._inner(x)
-                return rest.sf(y) - self.lump * (y >= shift) if self.lump else rest.sf(y)
+                return rest.sf(y) + self.lump * (y < shift)
 
             def pdf(self, x):
                 return rest.pdf(self._inner(x)) / (np.asarray(x, float) if start else 1.0)

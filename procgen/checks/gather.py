@@ -17,6 +17,7 @@ from procgen.checks.errors import ErrorSums
 from procgen.checks.probes import CrossPlan, SeriesPlan
 from procgen.checks.recover import Cannot, Expected, Route, dither
 from procgen.checks.shocks import MEMORY_LAGS, SHOCK_ARRAYS, CrossSums, ShockSums
+from procgen.checks.special import EventSums
 from procgen.checks.squares import Squares, SquareSums
 from procgen.checks.structure import Precision, Structure
 from procgen.checks.sums import Kept, Moments, Powers
@@ -98,6 +99,7 @@ class Gather:
             s.name: ShockSums(scores[s.name], plan.steps, _lags(s), s.period) for s in plan.series if s.name in scores
         }
         self.errors = {name: ErrorSums() for name in self.routes if name not in scores}
+        self.events = {name: EventSums(way.watched) for name, way in self.routes.items() if way.watched}
         self.squares = {name: SquareSums(each) for name, each in plan.squares.items()}
         self.cross = {pair: CrossSums() for pair in plan.shock_pairs}
 
@@ -127,7 +129,7 @@ class Gather:
         for name, gap in other.gaps.items():
             self.gaps[name] = max(self.gaps.get(name, gap), gap)
         self.stopped |= other.stopped
-        for kind in ("shocks", "errors", "squares", "cross"):
+        for kind in ("shocks", "errors", "events", "squares", "cross"):
             for key, sums in getattr(self, kind).items():
                 sums.merge(getattr(other, kind)[key])
 
@@ -172,9 +174,10 @@ class Gather:
         return found + [each.powers for each in self.squares.values()]
 
     def _arrays(self, kind: type) -> list[NDArray]:
-        found = [self.moments.mean, self.moments.products]
+        found: list[NDArray] = [self.moments.mean, self.moments.products]
         found += [getattr(powers, name) for powers in self._powers() for name in ("n", "sums", "pairs", "ends")]
         found += [getattr(s, name) for s in self.shocks.values() for name in SHOCK_ARRAYS]
+        found += [each.sums for each in self.events.values()]
         found += [sums for c in self.cross.values() for sums in c.sums.values()]
         return [values for values in found if values.dtype == kind]
 

@@ -40,6 +40,7 @@ class Lane:
         self.carriers = {name: way.start(first_path, paths) for name, way in self.sums.routes.items()}
         self.shocks = {name: sums.lane(paths) for name, sums in self.sums.shocks.items()}
         self.errors = {name: sums.lane(paths) for name, sums in self.sums.errors.items()}
+        self.events = {name: sums.lane(paths) for name, sums in self.sums.events.items()}
         self.squares = {name: sums.lane(paths) for name, sums in self.sums.squares.items()}
         self.cross = {pair: sums.lane(paths) for pair, sums in self.sums.cross.items()}
 
@@ -80,6 +81,8 @@ class Lane:
             z, self.carriers[plan.name] = route.tile(x, self.carriers[plan.name], self.first_path, self.step)
             if route.stopped:
                 sums.stopped[plan.name] = route.stopped
+            if plan.name in sums.events and self.carriers[plan.name] is not None:
+                sums.events[plan.name].absorb(self.carriers[plan.name].seen, self.step, self.events[plan.name])
             if plan.name in sums.shocks:
                 sums.shocks[plan.name].absorb(z, self.step, self.shocks[plan.name])
             else:
@@ -105,7 +108,7 @@ class Lane:
         """The sums, after the last step."""
         pools = [np.zeros((0, 0)) if pool is None else pool.averages() for pool in self.pools]
         self.sums.finish_lane(self.first_path, self.probes, pools, self.prints.T.copy())
-        for kind in ("shocks", "errors", "squares", "cross"):
+        for kind in ("shocks", "errors", "events", "squares", "cross"):
             for key, sums in getattr(self.sums, kind).items():
                 sums.finish(getattr(self, kind)[key])
         return self.sums

@@ -52,6 +52,7 @@ class Route:
     grain: float
     kalman: Kalman | None = None
     source: Any = None
+    watched: tuple[str, ...] = ()  # events with a known chance that are counted on the way
     ranked: float | None = None  # the grain, which ranks take in exactly, where ranks given the past stand for shocks
     stopped: str = ""  # why a tile could not be undone
     _means: OrderedDict[tuple[int, int], NDArray] = field(default_factory=OrderedDict, repr=False)
@@ -159,7 +160,8 @@ def route(name: str, theory: Any, graph: Any, grain: float, same_draws: bool = T
         ranks = ranked(graph, name, theory, grain)
         if isinstance(ranks, Ranking):
             words = f"ranks of {name} given its past"
-            return Route(name, Scores(LAWS["uniform"]()), words, theory, graph, 0.0, ranked=grain)
+            watched = ranks.node.term.watched
+            return Route(name, Scores(LAWS["uniform"]()), words, theory, graph, 0.0, ranked=grain, watched=watched)
         return _by_projection(name, theory, graph, grain, undone.reason if ranks is None else ranks.reason)
     words = f"recovered by undoing {name} down to {undone.source.name}"
     return Route(name, Scores(undone.source.law), words, theory, graph, grain, source=undone.source)

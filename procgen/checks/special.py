@@ -1,18 +1,25 @@
-"""What is special to whole numbers and to values with a chance of their own: ranks given the past, and shares."""
+"""What is special to whole numbers and to values with a chance of their own: ranks given the past, shares, events.
+
+An event whose chance given the past is p at each step happens Σp times but for a martingale of variance Σp(1 − p): the
+number of stays, of jumps, of steps with demand is judged so, whatever the runs are like.
+"""
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+import math
+from collections.abc import Iterator, Sequence
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from procgen.checks import judge
+from procgen.checks.blocks import across, add_products
 from procgen.checks.verdict import Check
 from procgen.terms.base import Unknown
 from procgen.terms.ranks import Ranking, ranking
 
+_FEW = 25.0  # variance of a number of events, at least, that is judged
 _SHARES = (0.02, 0.98)  # chances of the least value between which its share is worth a check
 
 
@@ -45,3 +52,43 @@ def whole_numbers(series: str, probe: str, law: Any, x: NDArray, seed: int) -> I
     if _SHARES[0] < chance < _SHARES[1]:
         count = int(np.count_nonzero(x < least + law.spacing / 2.0))
         yield Check.of(series, f"share of {least:.6g}", probe, "law", judge.share(count, len(x), chance))
+
+
+class EventSums:
+    """Numbers of the events that a term watches, and what chance says of them; mergeable."""
+
+    def __init__(self, names: Sequence[str]):
+        self.names = names
+        self.sums = np.zeros((len(names), 5))  # cases, events, sums of chances, of their variances, of third moments
+
+    def lane(self, paths: int) -> NDArray:
+        """What is carried for one range of paths: the same sums by path."""
+        return np.zeros((*self.sums.shape, paths))
+
+    def absorb(self, seen: Sequence[tuple[NDArray, NDArray]], first_step: int, lane: NDArray) -> None:
+        """Add a tile: for each name whether it has happened (steps, paths), and its chance (NaN: none taken)."""
+        for sums, (happened, p) in zip(lane, seen, strict=True):
+            asked, v = np.where(np.isnan(p), np.nan, 1.0), p * (1.0 - p)
+            for total, rows in zip(sums, (asked, asked * happened, p, v, v * (1.0 - 2.0 * p)), strict=True):
+                add_products(total, rows, None, first_step)
+
+    def finish(self, lane: NDArray) -> None:
+        """Close a range of paths."""
+        self.sums += across(lane)
+
+    def merge(self, other: EventSums) -> None:
+        self.sums += other.sums
+
+    def checks(self, series: str) -> Iterator[Check]:
+        """The share of each event, where enough of them can be expected."""
+        for name, (n, count, mean, variance, third) in zip(self.names, self.sums.tolist(), strict=True):
+            what, kind = f"share: {name}", "memory" if " after " in name else "level"
+            if variance < _FEW:
+                if n:
+                    note = f"{mean:.3g} of {n:.0f} are expected, too few to be judged by their number"
+                    yield Check(series, what, "all steps", kind, mean / n, count / n, outcome="reported", note=note)
+                continue
+            z, root = (count - mean) / math.sqrt(variance), math.sqrt(variance)
+            finding = judge.unit(z, root / n, theory=mean / n, skew=third / root**3)
+            doubt = judge.excess_doubt(n / variance - 6.0, int(n), "cases")
+            yield Check.of(series, what, "all steps", kind, judge.with_doubt(finding, doubt))

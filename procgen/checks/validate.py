@@ -205,6 +205,8 @@ def _shocks(gather: Gather, name: str) -> Iterator[Check]:
         yield Check(name, "recovered shocks", "", "law", outcome="untestable", note=_none_recovered(way, gather))
         return
     yield from shock_checks(name, sums, way.words)
+    if name in gather.events:
+        yield from gather.events[name].checks(name)
 
 
 def _none_recovered(way: Route, gather: Gather) -> str:

@@ -172,6 +172,15 @@ class Term:
         """
         return Unknown(self.unranked())
 
+    @property
+    def watched(self) -> tuple[str, ...]:
+        """What is special to the term: events whose chance given the past is known, beside ``rank``; for checks."""
+        return ()
+
+    def events(self, values: Array, cell: Cell, known: Sequence[Array | None], state: State | None, at: Array):
+        """For each of ``watched`` whether it has happened, and its chance given the past: NaN where none was taken."""
+        return ()
+
     def ahead(self, steps: Array, state: State, *inputs: Ahead) -> Ahead | Unknown:
         """Mean and variance at the coming `steps`, given the state just before the first of them."""
         return Unknown(f"{self.kind} has no closed forecast")

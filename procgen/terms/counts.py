@@ -61,6 +61,14 @@ class Counts(Term):
         law = self.law().distribution(self.mean * np.exp(known[0]) if len(known) > 1 else None)
         return (law.cdf(cell[0]), law.cdf(cell[1])), {}
 
+    @property
+    def watched(self):
+        return ("none",)
+
+    def events(self, values, cell, known, state, at):
+        law = self.law().distribution(self.mean * np.exp(known[0]) if len(known) > 1 else None)
+        return ((values < 0.5, np.broadcast_to(law.pmf(0.0), values.shape)),)
+
     def ahead(self, steps, state, *inputs):
         if len(inputs) > 1 and np.any(inputs[0].variance != 0.0):
             return Unknown(f"{self.kind} follows the law of its body's forecast, not its mean and variance alone")

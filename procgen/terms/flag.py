@@ -126,6 +126,13 @@ class Flag(Term):
         lower, upper = (np.where(edge >= 1.0, 1.0, np.where(edge >= 0.0, off, 0.0)) for edge in cell)
         return (lower, upper), {"on": values[-1:]}
 
+    @property
+    def watched(self):
+        return ("on",) if self.stay is None else ("on after on", "on after off")
+
+    def events(self, values, cell, known, state, at):
+        return runs(values > 0.0, state, *self.chances, self.stay is not None)
+
     def ahead(self, steps, state, *inputs):
         if self.spans:
             mean = self.on(steps)[:, None]
@@ -151,6 +158,15 @@ class Flag(Term):
             return f"x[t] = 1 for {' or '.join(f'{begin} ≤ t{end}' for begin, end in ends)}, else 0"
         enter, stay = self.chances
         return f"P(x[t] = 1) = {number(stay)} after a 1, {number(enter)} after a 0"
+
+
+def runs(on, state, enter, stay, apart):
+    """Whether it is on, with its chance: if wanted apart for steps after it was on, and after it was not."""
+    first = np.full((1, on.shape[1]), np.nan) if state is None else state["on"]
+    before = np.concatenate([first, np.where(on[:-1], 1.0, 0.0)])
+    if not apart:
+        return ((on, np.full(on.shape, enter)),)
+    return (on, np.where(before == 1.0, stay, np.nan)), (on, np.where(before == 0.0, enter, np.nan))
 
 
 def _below(p: float) -> float:

@@ -11,7 +11,7 @@ from procgen.chance.portable import log1p
 from procgen.chance.tables import NegativeBinomial, Poisson, uniforms
 from procgen.spec.declare import Body, Choice, Parameter, Real, Span
 from procgen.terms.base import Ahead, Draw, Term, Unknown, number
-from procgen.terms.flag import Flag
+from procgen.terms.flag import Flag, runs
 
 UNIFORM = LAWS["uniform"]()
 LOST = 1e-6  # chance of a size that rounds to nothing, below which that does not matter
@@ -152,6 +152,22 @@ class Intermittent(Term):
             np.where(edge >= 0.0, 1.0 - chance + chance * self.law_of_size.ranks(edge), 0.0) for edge in cell
         )
         return (lower, upper), {"on": on[-1:]}
+
+    @property
+    def watched(self):
+        comes = ("demand",) if self.stay is None else ("demand after demand", "demand after none")
+        return (*comes, "large sizes", "small sizes")
+
+    def events(self, values, cell, known, state, at):
+        size, on, grain = self.law_of_size, values > 0.0, float(np.max(cell[1] - cell[0]))
+        seen = 1.0 - float(size.ranks(grain / 2.0))  # what does not round to nothing
+        found = [(x, seen * p) for x, p in runs(on, state, *self.flag.chances, self.stay is not None)]
+        for level, above in ((size.mean + 1.2 * size.sd, True), (size.mean - 0.8 * size.sd, False)):
+            edge = (np.floor(level / grain) + 0.5) * grain if grain > LEAST * size.mean else level
+            below = float(size.ranks(edge)) - (1.0 - seen)
+            chance = (seen - below if above else below) / seen
+            found.append((values > edge if above else values < edge, np.where(on, chance, np.nan)))
+        return found
 
     def ahead(self, steps, state, *inputs):
         comes, size = self.flag.ahead(steps, state), self.law_of_size

@@ -74,6 +74,19 @@ class CompoundPoisson(Term):
         law = Jumps(self.rate, self.mean, self.sd).distribution()
         return (law.cdf(cell[0]), law.cdf(cell[1])), {}
 
+    @property
+    def watched(self):
+        return ("jumps", "large jumps")
+
+    def events(self, values, cell, known, state, at):
+        law, grain = Jumps(self.rate, self.mean, self.sd).distribution(), float(np.max(cell[1] - cell[0]))
+        jumped = 1.0 - float(law.cdf(grain / 2.0) - law.cdf(np.nextafter(-grain / 2.0, -np.inf)))
+        large = abs(self.mean) + self.sd
+        edge = (np.floor(large / grain) + 0.5) * grain if grain > 1e-9 * large else large
+        beyond = float(law.cdf(-edge) + law.sf(edge)) / jumped
+        on = (cell[0] >= 0.0) | (cell[1] < 0.0)
+        return (on, np.full(values.shape, jumped)), (np.abs(values) > edge, np.where(on, beyond, np.nan))
+
     def ahead(self, steps, state, *inputs):
         flat = np.ones((len(steps), 1))
         return Ahead(self.rate * self.mean * flat, self.rate * (self.mean**2 + self.sd**2) * flat)

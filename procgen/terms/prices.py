@@ -21,6 +21,7 @@ DRIFT = Parameter(
 SD = Parameter("sd", "σ", Real(above=0), "volatility: standard deviation of the logarithm's shock", per="diffusion")
 START = Parameter("start", "x₀", Real(above=0), "value at step 0", default=1.0, unit="series")
 COARSE = 0.02  # rounding beyond this share of a step's volatility blurs where the price was
+FAR = 4.0  # volatilities: hardly any shock moves a price so far in a step, most jumps do
 NO_PAST = "its jumps begin after step 0; lag less"
 
 
@@ -148,6 +149,17 @@ class Merton(Term):
         before = np.concatenate([first, logs[:-1]])
         lower, upper = (law.cdf(np.log(edge) - before) for edge in cell)
         return (lower, upper), {"x": logs[-1:]}
+
+    @property
+    def watched(self):
+        return (f"changes beyond {FAR:g}σ",)
+
+    def events(self, values, cell, known, state, at):
+        law, logs = self.change().distribution(), np.log(values)
+        first = np.full((1, values.shape[1]), np.nan) if state is None else state["x"]
+        moved = np.abs(np.diff(np.concatenate([first, logs]), axis=0) - self.step_drift())
+        beyond = law.cdf(self.step_drift() - FAR * self.sd) + law.sf(self.step_drift() + FAR * self.sd)
+        return ((moved > FAR * self.sd, np.where(np.isnan(moved), np.nan, beyond)),)
 
     def ahead(self, steps, state, *inputs):
         first = 1 if "x" in state else 0

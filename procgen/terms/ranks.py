@@ -47,6 +47,7 @@ class Ranking:
         self._steps = [*chain, (node, -1)]
         self._states: list[Any] = [None] * len(self._steps)
         self._step = 0
+        self.seen: Any = ()  # of the last tile: events that the term watches, and their chances
         beside = [part for at, i in self._steps for k, part in enumerate(at.inputs) if k != i]
         self._sure = [part for part in beside if not sources_below(graph, part)]
         self._known = KnownParts(graph, self._sure) if self._sure else None
@@ -63,7 +64,10 @@ class Ranking:
         for k, (node, random) in enumerate(self._steps):
             beside = [None if i == random else known.get(id(part)) for i, part in enumerate(node.inputs)]
             if node is self.node:
-                answer = node.term.rank(values, self._cell(values), beside, self._states[k], at)
+                told = values, self._cell(values), beside, self._states[k], at
+                lost = np.isnan(values)
+                self.seen = [(happened, np.where(lost, np.nan, p)) for happened, p in node.term.events(*told)]
+                answer = node.term.rank(*told)
             else:
                 answer = node.term.invert(values, beside, self._states[k], at)
             if isinstance(answer, Unknown):

@@ -36,6 +36,8 @@ EXEMPT = {
         "rank",
         "ranks",
         "following",
+        "events",
+        "runs",
     },
 }
 # Single functions: only whether a spec is accepted, or a length rounded to a power of two, depends on them.

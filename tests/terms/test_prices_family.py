@@ -96,6 +96,15 @@ def test_the_law_of_a_jump_diffusion_is_that_of_its_characteristic_function():
     assert law.mean() == pytest.approx(0.2 - 0.42) and law.var() == pytest.approx(0.16 + 0.7 * (0.36 + 0.25))
 
 
+def test_no_jump_has_a_chance_of_its_own():
+    law = Jumps(0.7, -0.6, 0.5).distribution()
+    assert law.lump == pytest.approx(np.exp(-0.7))
+    x = np.array([-1.0, -1e-9, 0.0, 0.4])
+    below = [stats.poisson(0.7).pmf(n) * stats.norm(-0.6 * n, 0.5 * np.sqrt(n)).cdf(x) for n in range(1, 30)]
+    np.testing.assert_allclose(law.cdf(x), sum(below) + np.exp(-0.7) * (x >= 0), atol=1e-12)
+    np.testing.assert_allclose(law.cdf(x) + law.sf(x), 1.0, atol=1e-12)
+
+
 def test_merton_is_a_mixture_of_lognormal_laws():
     """Merton (1976), eq. 16: given n jumps in t steps the price is lognormal; summed over n by SciPy."""
     drift, sd, rate, m, d, t = 0.01, 0.1, 0.2, -0.1, 0.15, 30
