@@ -76,7 +76,7 @@ class _Body:
             factor = number(node.term.factor)
             return f"{'−' if factor == '−1' else factor + ' '}{self._called(node.inputs[0])}"
         if isinstance(node.term, Sum) and node.name == self.owner and node is not self.root:
-            return f"({' + '.join(self._called(part) for part in node.inputs)})"
+            return f"({' + '.join(self._called(part) for part in node.inputs)})".replace("+ −", "− ")
         return self._label(node)
 
     def _label(self, node: Any) -> str:

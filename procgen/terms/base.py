@@ -238,7 +238,7 @@ def without_gap(values: Array, fill: float) -> tuple[Array, int]:
 
 def number(x: float) -> str:
     """A coefficient as it is written in an equation: shortest digits, a true minus sign."""
-    return f"{x:.6g}".replace("-", "−")
+    return f"{x + 0.0:.6g}".replace("-", "−")  # a negative zero is a zero
 
 
 def signed(x: float, what: str) -> str:

@@ -223,3 +223,9 @@ def test_an_equation_says_from_which_variance_it_leaves():
 )  # fmt: skip
 def test_an_equation_counts_from_where_it_begins(term, said):
     assert graph_of(f"  x: {{{term}}}").series["x"].term.equation() == said
+
+
+def test_a_negative_zero_is_a_zero():
+    assert graph_of("  x: {integrate: {of: [{white_noise: {sd: 1}}], start: -0.0}}").series["x"].term.equation("e") == (
+        "y[t] = y[t−1] + e[t],  y[0] = 0"
+    )
