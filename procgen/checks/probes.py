@@ -8,7 +8,7 @@ from __future__ import annotations
 import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
-from functools import cached_property
+from functools import cached_property, partial
 from typing import Any
 
 import numpy as np
@@ -128,12 +128,19 @@ class Pool:
 
 
 class Marginal:
-    """A known law at a probe, made to look like a law of standardised shocks (so that Scores can read it)."""
+    """A known law at a probe, made to look like a law of standardised shocks (so that Scores can read it).
+
+    `law` gives it when it is first asked for: only the process that judges must import what it takes.
+    """
 
     gaussian = False
 
-    def __init__(self, law: Any, mean: float, sd: float):
-        self.frozen, self.mean, self.sd = law, mean, sd
+    def __init__(self, law: Callable[[], Any], mean: float, sd: float):
+        self._law, self.mean, self.sd = law, mean, sd
+
+    @cached_property
+    def frozen(self) -> Any:
+        return self._law()
 
     def distribution(self) -> Marginal:
         return self
@@ -210,8 +217,8 @@ def _marginals(plan: SeriesPlan) -> None:
     moving = np.flatnonzero(~plan.constant)
     chosen = sorted({moving[0], moving[len(moving) // 2], moving[-1]}) if len(moving) else []
     for i in map(int, chosen):
-        law = plan.theory.marginal(int(plan.steps[i]))
-        if law is not None and np.isfinite(plan.variance[i]):
+        law = partial(plan.theory.marginal, int(plan.steps[i]))
+        if np.isfinite(plan.variance[i]) and (plan.gaussian or law() is not None):  # a normal law is always known
             plan.scores[i] = Scores(Marginal(law, float(plan.mean[i]), float(np.sqrt(plan.variance[i]))))
 
 
