@@ -64,10 +64,10 @@ def numbers_of(text: str) -> tuple[float, ...]:
 
 def horizons_of(text: str) -> tuple[int, ...]:
     """Steps ahead from `1,10,100`."""
-    steps = steps_of(text)
-    if min(steps) < 1:
-        raise typer.BadParameter(f"expected steps ahead from 1 on, such as 1,10,100, got {text!r}")
-    return steps
+    parts = [part.strip() for part in text.split(",")]
+    if not all(part.isdecimal() and len(part) <= 7 and 1 <= int(part) <= 1_000_000 for part in parts):
+        raise typer.BadParameter(f"expected steps ahead from 1 to 1,000,000, such as 1,10,100, got {text!r}")
+    return tuple(int(part) for part in parts)
 
 
 def column_of(text: str) -> tuple[str, str]:
