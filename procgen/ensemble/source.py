@@ -39,6 +39,7 @@ class SpecSource:
     """The values of a spec: series in the order of the spec, then revealed outputs in the order asked for."""
 
     def __init__(self, spec: Any, reveal: tuple[str, ...] = ()):
+        from procgen.terms.by_path import deepest
         from procgen.terms.graph import build
 
         self.spec, self.reveal = spec, reveal
@@ -52,7 +53,7 @@ class SpecSource:
         self.columns += [Column(name, revealed=True) for name in reveal]
         self.stamps = spec.time.stamps if spec.time.start is not None else None
         self.portable = self.graph.portable
-        self.depth = self.graph.depth
+        self.depth = deepest(self.graph)
 
     def run(self, first_path: int, paths: int) -> Run:
         from procgen.terms.by_path import run

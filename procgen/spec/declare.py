@@ -26,6 +26,7 @@ from procgen.spec.domains import (
     Text,
     Whole,
     one_or_list,
+    varies,
 )
 from procgen.spec.model import Frozen
 from procgen.spec.tree import Tree
@@ -90,6 +91,9 @@ class Parameter:
     def read(self, tree: Tree, reader: Reading) -> Any:
         """Return the value at `tree` per step, or INVALID after reporting."""
         reader = reader.about(self)
+        if varies(tree) and not isinstance(self.domain, Real | Reals):
+            reader.fault(tree, f"{self.name} cannot vary, only numbers can; write {self.domain.describe()}")
+            return INVALID
         if tree.is_map and "per" in tree.value and not self.domain.structured:
             return self._read_per(tree, reader)
         return self.domain.read(tree, reader)

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterable, Iterator, Mapping
+from collections.abc import Callable, Container, Iterable, Iterator, Mapping
 from dataclasses import dataclass, replace
 from itertools import product
 from typing import Any
@@ -104,8 +104,11 @@ def varying_in(entry: Entry) -> Iterator[Varying]:
             yield from varying_in(inner)
 
 
-def fixed(spec: Spec, number: Callable[[str, Varying], Any]) -> Spec:
-    """Return a spec with `number(owner, varying)` in place of every Varying; the same one where there is none."""
+def fixed(spec: Spec, number: Callable[[str, Varying], Any], only: Container[str] | None = None) -> Spec:
+    """Return a spec with `number(owner, varying)` in place of every Varying; the same one where there is none.
+
+    `only`: the bodies that any of them stands in, where that is known.
+    """
 
     def entry(old: Entry, owner: str) -> Entry:
         times, values = replaced((old.times, old.values), lambda varying: number(owner, varying))
@@ -121,7 +124,8 @@ def fixed(spec: Spec, number: Callable[[str, Varying], Any]) -> Spec:
         return old if all(a is b for a, b in zip(new, old, strict=True)) else new
 
     def owners(old: Mapping[str, Any]) -> Mapping[str, Any]:
-        new = {name: (one, body(one.of, name)) for name, one in old.items()}
+        kept = {name: (one, one.of) for name, one in old.items()} if only is not None else {}
+        new = kept | {name: (one, body(one.of, name)) for name, one in old.items() if only is None or name in only}
         if all(of is one.of for one, of in new.values()):
             return old
         return Frozen({name: one if of is one.of else replace(one, of=of) for name, (one, of) in new.items()})

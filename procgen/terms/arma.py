@@ -33,6 +33,20 @@ def recursion(phi, theta, x, a):
 
 
 @kernel
+def recursion_by_path(phi, theta, x, a):
+    """`recursion` with coefficients (p, paths) and (q, paths)."""
+    p = phi.shape[0]
+    q = theta.shape[0]
+    for t in range(x.shape[0] - p):
+        v = a[t + q]
+        for i in range(p):
+            v = v + phi[i] * x[t + p - 1 - i]
+        for j in range(q):
+            v = v + theta[j] * a[t + q - 1 - j]
+        x[t + p] = v
+
+
+@kernel
 def inversion(phi, theta, x, a):
     """The shocks of `recursion`, written into `a` behind its first rows."""
     p = phi.shape[0]
@@ -56,6 +70,7 @@ class Arma(Term):
     example = "arma: {phi: [0.7, -0.1], theta: 0.3, sd: 2}"
     knows = "mean, autocovariance at any lag; marginal law when Gaussian"
     takes_shock = True
+    by_rows = ("phi", "theta", "sd", "total_sd")
     parameters: ClassVar[tuple[Parameter, ...]] = (
         Parameter("phi", "φ", Reals(), "coefficients of x[t−1], x[t−2], …"),
         Parameter("theta", "θ", Reals(), "coefficients of a[t−1], a[t−2], …"),
@@ -160,7 +175,8 @@ class Arma(Term):
         a = inputs[0]
         x = _buffer(state["x"], a)
         shocks = np.concatenate([_wide(state["a"], a), a]) if self.theta else a
-        recursion(np.array(self.phi), np.array(self.theta), x, shocks)
+        phi, theta = np.array(self.phi), np.array(self.theta)
+        (recursion if phi.ndim == theta.ndim == 1 else recursion_by_path)(phi, theta, x, shocks)
         p, q = len(self.phi), len(self.theta)
         return x[p:], {"x": x[len(x) - p :].copy(), "a": shocks[len(shocks) - q :].copy()}
 

@@ -96,6 +96,7 @@ class Term:
     separate: ClassVar[bool] = False  # whether each entry of its body is an input of its own
     outputs: ClassVar[tuple[str, ...]] = ()
     correlates: ClassVar[bool] = False  # whether its first draw may be named in `correlation`, as those of a noise may
+    by_rows: ClassVar[tuple[str, ...]] = ()  # parameters that may be rows, one value a path, in `recurse`
     burns_in: ClassVar[bool] = False  # whether `begin` reads its inputs from the first row on, a few rows at a time
     portable: ClassVar[bool] = True
     why_not_portable: ClassVar[str] = ""

@@ -1,61 +1,127 @@
-"""Values of a spec whose parameters vary by path: each path is run as the path of a spec with its values in place."""
+"""Values of a spec whose parameters vary by path: each path is that of a spec with its values in place.
+
+Paths begin one by one, each from the graph of its own spec, and then run side by side (`stack`).
+"""
 
 from __future__ import annotations
 
 from collections.abc import Sequence
 from itertools import pairwise
+from typing import Any
 
 import numpy as np
 
-from procgen.terms.base import Array
-from procgen.terms.graph import Graph
+from procgen.chance.streams import Stream
+from procgen.terms.base import Array, Node
+from procgen.terms.combine import Hidden
+from procgen.terms.graph import Graph, Source
 from procgen.terms.run import Run
+from procgen.terms.stack import Stack
 from procgen.terms.varied import Varied
 
-FEW = 8  # distinct values up to which it is cheaper to run each for all paths and to keep some of them
+FEW = 16  # steps before step 0 that are drawn for all paths at once
+
+
+class PartRun(Run):
+    """The run of neighbouring paths that begins from the draws of a whole one, which are made once for all."""
+
+    def __init__(self, graph: Graph, first_path: int, paths: int, reveal: Sequence[str], whole: Run, kept: dict):
+        super().__init__(graph, first_path, paths, reveal)
+        self._whole, self._kept = whole, kept
+
+    def _of_whole(self, rows: Array) -> Array:
+        first = self.first_path - self._whole.first_path
+        return rows[:, first : first + self.paths]
+
+    def _normals(self, stream: Stream, first_step: int, steps: int) -> Array:
+        if steps > FEW:
+            return super()._normals(stream, first_step, steps)
+        key = (stream, first_step, steps)
+        if key not in self._kept:
+            self._kept[key] = self._whole._normals(stream, first_step, steps)
+        return self._of_whole(self._kept[key])
+
+    def _draw(self, source: Source, first_step: int, steps: int, values: dict[int, Array]) -> None:
+        if steps > FEW:  # burn-ins, whose lengths are each path's own
+            super()._draw(source, first_step, steps, values)
+            return
+        members = source.group.sources if source.group is not None else (source,)
+        key = (source.stream, first_step, steps, "shocks")
+        if key not in self._kept:
+            drawn: dict[int, Array] = {}
+            self._whole._draw(source, first_step, steps, drawn)
+            self._kept[key] = [drawn[id(member)] for member in members]
+        for member, rows in zip(members, self._kept[key], strict=True):
+            values[id(member)] = self._of_whole(rows)
 
 
 class ByPath:
     """A `Run` of a spec whose parameters vary by path; what it answers, and when, is the same."""
 
     def __init__(self, graph: Graph, first_path: int, paths: int, reveal: Sequence[str] = ()):
-        self._varied = varied_of(graph)
-        rows = self._varied.rows(first_path, paths)
-        table = np.array([*rows.values()]).T
-        distinct, which = np.unique(table, axis=0, return_inverse=True)
-        which = which.reshape(-1)
-        self.paths = paths
-        self._parts: list[tuple[Run, Array, Array]] = []  # each run, which of its columns are kept, and where they go
-        if len(distinct) <= FEW:
-            for k, values in enumerate(distinct):
-                run = Run(self._graph(rows, values), first_path, paths, reveal)
-                self._parts.append((run, np.flatnonzero(which == k), np.flatnonzero(which == k)))
-        else:
-            edges = [0, *(np.flatnonzero(np.diff(which)) + 1).tolist(), paths]
-            for start, end in pairwise(edges):
-                run = Run(self._graph(rows, table[start]), first_path + start, end - start, reveal)
-                self._parts.append((run, np.arange(end - start), np.arange(start, end)))
+        self._varied, self._first, self._reveal = varied_of(graph), first_path, tuple(reveal)
+        self._rows = self._varied.rows(first_path, paths)
+        self._graphs: dict[tuple[float, ...], Graph] = {}
+        self._drawn: dict[Any, Any] = {}  # what lies before step 0, of all paths
+        changes = np.any(np.diff(np.array([*self._rows.values()]), axis=1) != 0.0, axis=0)
+        self._edges = [0, *(np.flatnonzero(changes) + 1).tolist(), paths]
+        self._whole = Run(self._make(0), first_path, paths, reveal)
+        self._runs = [self._run(start, end) for start, end in pairwise(self._edges)]
+        self._nodes = self._stack()
 
-    def _graph(self, rows: dict[str, Array], values: Array) -> Graph:
-        return Graph(self._varied.at(dict(zip(rows, values.tolist(), strict=True))))
+    def _make(self, place: int) -> Graph:
+        values = {name: float(row[place]) for name, row in self._rows.items()}
+        return Graph(self._varied.at(values), factors=True)
+
+    def _run(self, start: int, end: int) -> Run:
+        values = tuple([float(row[start]) for row in self._rows.values()])
+        if values not in self._graphs:
+            self._graphs[values] = self._make(start)
+        return PartRun(
+            self._graphs[values], self._first + start, end - start, self._reveal, self._whole, self._drawn
+        )
+
+    def _stack(self) -> list[tuple[Node, list[Node]]]:
+        """Put stacks in the place of the terms of the whole run; its nodes, each with those of the runs."""
+        widths, orders, found = np.diff(self._edges).tolist(), [run._order for run in self._runs], []
+        for place, node in enumerate(self._whole._order):
+            if isinstance(node, Node) and not isinstance(node.term, Hidden):
+                nodes = [order[place] for order in orders]
+                node.term = Stack([each.term for each in nodes], widths)
+                found.append((node, nodes))
+        return found
+
+    def _begin(self) -> None:
+        for run in self._runs:
+            run._begin()
+        for node, nodes in self._nodes:
+            states = [run.state_of(own) for run, own in zip(self._runs, nodes, strict=True)]
+            self._whole._states[node.key] = node.term.gathered(states)
 
     def tile(self, steps: int) -> dict[str, Array]:
         """The next `steps` steps of every series: name to float64 (steps, paths)."""
-        out: dict[str, Array] = {}
-        for run, kept, places in self._parts:
-            for name, values in run.tile(steps).items():
-                out.setdefault(name, np.empty((steps, self.paths)))[:, places] = values[:, kept]
-        return out
+        if self._runs and not self._whole._states:
+            self._begin()
+        self._runs, self._drawn = [], {}
+        return self._whole.tile(steps)
 
     def state(self) -> dict[str, Array]:
-        """The carried states after the last tile, flat, by number of the part and name."""
-        return {f"{k}/{name}": rows for k, (run, _, _) in enumerate(self._parts) for name, rows in run.state().items()}
+        """The carried state after the last tile, flat, by name."""
+        return self._whole.state()
 
     def restore(self, step: int, state: dict[str, Array]) -> None:
         """Go on from a state that `state()` gave after step `step` − 1 of the same paths."""
-        for k, (run, _, _) in enumerate(self._parts):
-            mark = f"{k}/"
-            run.restore(step, {name.removeprefix(mark): rows for name, rows in state.items() if name.startswith(mark)})
+        self._whole.restore(step, state)
+
+
+def deepest(graph: Graph) -> int:
+    """The most steps before step 0 that any path is drawn from, looked for at the ends of the draws."""
+    varied = graph.varied
+    if varied is None or not varied.parameters:
+        return graph.depth
+    trials = [p.varying.law.trials() for p in varied.parameters.values()]
+    ends = [{name: t[i] for name, t in zip(varied.parameters, trials, strict=True)} for i in (0, -1)]
+    return max(graph.depth, *(Graph(varied.at(values)).depth for values in ends))
 
 
 def varied_of(graph: Graph) -> Varied:

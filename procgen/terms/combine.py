@@ -53,6 +53,8 @@ class Sum(Term):
 class Scaled(Term):
     """A factor on a body, from `times:`; not a kind of its own."""
 
+    by_rows = ("factor",)
+
     def __init__(self, factor):
         super().__init__({"factor": factor})
 

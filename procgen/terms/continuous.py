@@ -49,6 +49,8 @@ class OrnsteinUhlenbeck(Integrated):
         ),
     )
 
+    by_rows = ("rate", "mean", "sd", "total_sd")
+
     @classmethod
     def check(cls, values):
         if values["before"] is not None and values["total_sd"] is not None:

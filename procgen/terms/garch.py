@@ -70,6 +70,7 @@ class Garch(Conditional):
     purpose = "white shocks whose variance follows the squared shocks before them"
     source = "Bollerslev (1986); arch is its case without beta (Engle 1982); stationarity: Nelson (1990)"
     example = "garch: {sd: 6.3, alpha: 0.1, beta: 0.85}"
+    by_rows = ("omega", "sd", "alpha", "beta")
     parameters: ClassVar[tuple[Parameter, ...]] = (OMEGA, SD, ALPHA, BETA, LAW, INFINITE, BEFORE)
 
     @classmethod

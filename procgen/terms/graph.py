@@ -52,8 +52,9 @@ class Group:
 class Graph:
     """The nodes of a spec. `series` maps each output column to its node."""
 
-    def __init__(self, spec: Spec):
-        self.spec = spec
+    def __init__(self, spec: Spec, factors: bool = False):
+        """`factors`: every entry gets a node for its factor, also of 1, so that specs that differ in it are alike."""
+        self.spec, self._factors = spec, factors
         self.varied: Varied | None = None  # set by `build`
         self.sources: list[Source] = []
         self.groups: list[Group] = []
@@ -150,7 +151,7 @@ class Graph:
     def _entry(self, entry: Entry, owner: str) -> Node:
         if id(entry) not in self._entries:
             node = self._unscaled(entry, owner)
-            if entry.times != 1.0:
+            if entry.times != 1.0 or self._factors:
                 node = self._node(Scaled(entry.times), node.name, [node], entry.place)
             self._entries[id(entry)] = node
         return self._entries[id(entry)]

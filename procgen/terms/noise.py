@@ -17,6 +17,7 @@ class WhiteNoise(Term):
     example = "white_noise: {sd: 2, law: {student_t: {df: 6}}}"
     knows = "everything: white, strictly stationary, independent"
     noise = True
+    by_rows = ("sd",)
     parameters = (
         Parameter("sd", "σ", Real(above=0), "standard deviation", unit="series", per="diffusion"),
         LAW,

@@ -103,6 +103,8 @@ def companion(phi: Sequence[float], theta: Sequence[float], depth_x: int, depth_
 
 def stationary_cross(a: Array, q: Array, b: Array) -> Array:
     """Σ_j aʲ q b′ʲ by doubling: S ← S + a S b′, a ← a², b ← b²."""
+    if q.size == 1:
+        return np.full((1, 1), _cross_of_one(float(a[0, 0]), float(q[0, 0]), float(b[0, 0])))
     total = q
     while True:
         added = matmul(matmul(a, total), b.T.copy())
@@ -110,6 +112,17 @@ def stationary_cross(a: Array, q: Array, b: Array) -> Array:
         if np.max(np.abs(added)) <= 2.0**-60 * np.max(np.abs(total)):
             return total
         a, b = matmul(a, a), matmul(b, b)
+
+
+def _cross_of_one(a: float, q: float, b: float) -> float:
+    """`stationary_cross` of single numbers, by the same operations in plain floats: each path may have its own."""
+    total = q
+    while True:
+        added = 0.0 + (0.0 + a * total) * b
+        total = total + added
+        if abs(added) <= 2.0**-60 * abs(total):
+            return total
+        a, b = 0.0 + a * a, 0.0 + b * b
 
 
 def decay_length(a: Array, negligible: float = NEGLIGIBLE) -> int:

@@ -64,6 +64,7 @@ class Varied:
         self.constants = {name: float(p.values(0, 1)[0]) for name, p in self.by_series.items()}
         self.spec = fixed(spec, self._constant)
         self.declared = {p.name: p for p in _parameters(spec) if p.varying.over == PATH}
+        self._owners = {owner for owner, _ in varying_of(self.spec)}
         used = {varying.key(owner) for owner, varying in varying_of(spec)}
         self.parameters = {name: p for name, p in self.declared.items() if name in used}
 
@@ -76,7 +77,7 @@ class Varied:
 
     def at(self, values: Mapping[str, float], spec: Spec | None = None) -> Spec:
         """The spec, or a part of it, with these values of its parameters in place."""
-        return fixed(spec or self.spec, lambda owner, varying: varying.number(values[varying.key(owner)]))
+        return fixed(spec or self.spec, lambda owner, varying: varying.number(values[varying.key(owner)]), self._owners)
 
     @cached_property
     def typical(self) -> Spec:

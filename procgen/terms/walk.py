@@ -26,6 +26,7 @@ class RandomWalk(Term):
     example = "random_walk: {sd: 0.01, drift: -0.00005, start: 3.9}"
     knows = "mean and covariance at any steps"
     takes_shock = True
+    by_rows = ("sd", "drift", "start")
     parameters = (
         SD,
         Parameter("drift", "d", Real(), "mean change a step", default=0.0, unit="series", per="rate"),

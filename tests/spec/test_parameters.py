@@ -98,6 +98,9 @@ def test_raw_and_digest():
     ({"white_noise": {"sd": 1, "law": {"student_t": {"df": {"parameter": "k"}}}}},
      "this number cannot vary, numbers of terms can; write a number above 2\n"
      "  at series.x[0].white_noise.law.student_t.df"),
+    ({"seasonal": {"period": by_path(UNIFORM), "harmonics": [{"amplitude": 1}]}},
+     "period cannot vary, only numbers can; write a length of time above 0: a number of steps, or a text such as 15min, "
+     "1d, 2 weeks\n  at series.x[0].seasonal.period"),
     ({"constant": {"draw": {"uniform": [2, 1]}, "over": "path"}},
      "expected two numbers, the lower one first, as in [0.3, 0.9], got a list of 2; got 2 and 1 (between: the ends)\n"
      "  at series.x[0].constant.draw.uniform"),
