@@ -9,6 +9,7 @@ import pytest
 
 from tests.studies import departures, false_alarms
 from tests.studies.departures import CASES, named, planted
+from tests.studies.families import OFTEN
 
 EASY = [c for c in CASES if "sum:" not in c.name]
 
@@ -21,7 +22,7 @@ def test_a_departure_is_found_and_named(case):
 
 
 SHAPES = ((1, 3000), (40, 150), (1000, 60))
-TRUE = [(family, SHAPES[k % 3]) for k, family in enumerate(false_alarms.FAMILIES)]
+TRUE = [(family, SHAPES[k % 3]) for k, family in enumerate(OFTEN)]
 TRUE += [(family, shape) for family in ("ar", "several") for shape in SHAPES]
 
 

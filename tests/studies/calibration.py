@@ -27,6 +27,8 @@ from tests.studies.intervals import interval
 LEVELS = (1e-2, 1e-3, 1e-4, 1e-5, 1e-6)
 _PLAIN = 2.0  # statistics nearer than this many standard errors are not judged: their p is far above 0.01
 _CHUNK = 4_000_000
+_HALVINGS = 16
+QUICK = 1_000_000  # numbers drawn for a case in the quick mode
 
 Findings = Callable[[np.random.Generator, int], Iterator[tuple[Finding, int]]]
 Draws = Callable[[np.random.Generator, int], NDArray]
@@ -68,6 +70,11 @@ def run(case: Case, seed: int, scale: float = 1.0) -> Counts:
             counts.small += times * (open_ & (finding.log_p <= np.log(LEVELS)))
         counts.drawn += piece
     return counts
+
+
+def quick(case: Case) -> float:
+    """The share of a case's draws that takes about a tenth of a second."""
+    return min(1.0, max(300, QUICK // case.size) / case.draws)
 
 
 def too_many(counts: Counts, chance: float) -> list[float]:
@@ -127,7 +134,7 @@ def _edges(judged: Callable[[float], Finding], centre: float, sd: float) -> Iter
             high += 1.0
             if high > 60:
                 return
-        for _ in range(30):
+        for _ in range(_HALVINGS):
             middle = 0.5 * (low + high)
             low, high = (middle, high) if judged(centre + middle * sd).log_p > level else (low, middle)
         yield high * abs(sd), judged(centre + high * sd)
@@ -137,7 +144,7 @@ def main() -> None:
     from tests.studies.calibration_cases import CASES
 
     parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
-    parser.add_argument("--quick", action="store_true", help="a hundredth of the draws")
+    parser.add_argument("--quick", action="store_true", help="as many draws as take seconds")
     parser.add_argument("--only", default="", help="cases whose name contains this")
     parser.add_argument("--scale", type=float, default=1.0, help="draws, as a multiple of those of each case")
     options = parser.parse_args()
@@ -146,7 +153,7 @@ def main() -> None:
         if options.only not in case.name:
             continue
         begun = perf_counter()
-        rows.append((case.name, run(case, seed, 0.01 if options.quick else options.scale)))
+        rows.append((case.name, run(case, seed, quick(case) if options.quick else options.scale)))
         bad = too_many(rows[-1][1], 1e-3)
         worst = f"  TOO MANY at {bad}" if bad else ""
         print(f"{case.name}: {perf_counter() - begun:.1f} s{worst}", file=sys.stderr, flush=True)
