@@ -10,6 +10,7 @@ too: while workers import (0.2 s) it is already at it.
 from __future__ import annotations
 
 import contextlib
+import importlib
 import json
 import os
 import signal
@@ -22,11 +23,16 @@ from types import FrameType
 from typing import Any
 
 from procgen.ensemble.errors import EnsembleError, system_sentence
-from procgen.ensemble.worker import function
 
 Progress = Callable[[int, int], None]  # (rows done so far, rows in all)
 Records = list[dict[str, Any]]
 WORTH = 4_000_000  # values that repay one more process that draws
+
+
+def function(name: str) -> Callable[..., Any]:
+    """The function behind "module:function"."""
+    module, _, attribute = name.partition(":")
+    return getattr(importlib.import_module(module), attribute)
 
 
 def processors() -> int:

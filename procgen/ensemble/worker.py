@@ -2,22 +2,14 @@
 
 from __future__ import annotations
 
-import importlib
 import json
 import os
 import signal
 import sys
 import threading
-from collections.abc import Callable
 from queue import SimpleQueue
 from types import FrameType
 from typing import Any
-
-
-def function(name: str) -> Callable[..., Any]:
-    """The function behind "module:function"."""
-    module, _, attribute = name.partition(":")
-    return getattr(importlib.import_module(module), attribute)
 
 
 class Worker:
@@ -52,6 +44,7 @@ class Worker:
         self._say(rows=rows)
 
     def _do(self, work: str, task: dict[str, Any]) -> None:
+        from procgen.ensemble.engines import function
         from procgen.ensemble.errors import EnsembleError
 
         try:
