@@ -120,7 +120,7 @@ def check(values: Mapping[str, Any], names: Sequence[str], where: str) -> Iterab
         )
 
 
-def _durations(durations: Mapping[str, float], names: Sequence[str]) -> Iterable[Issue]:
+def _durations(durations: Mapping[str, Stay], names: Sequence[str]) -> Iterable[Issue]:
     if set(durations) != set(names):
         yield "durations", f"expected one for each of {', '.join(names)}, got {', '.join(durations)}"
     for name, stay in durations.items():

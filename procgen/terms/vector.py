@@ -233,8 +233,8 @@ class VectorErrorCorrection(VectorArma):
         if ones != k - r or others >= 1.0:
             yield (
                 "adjustment",
-                f"expected as many unit roots as components less relations ({k - r}), all else inside the unit circle, got "
-                f"{ones} and a root of size {others:.6g}; adjust against a relation: lower what makes it positive",
+                f"expected as many unit roots as components less relations ({k - r}), all else inside the unit circle, "
+                f"got {ones} and a root of size {others:.6g}; adjust against a relation: lower what makes it positive",
             )
 
     def __init__(self, values):

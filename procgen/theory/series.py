@@ -271,7 +271,8 @@ class SeriesTheory:
         """The series, for what needs autocovariances that depend on the lag alone."""
         judged = self.stationarity
         if not judged.covariance_stationary:
-            why = "it has no autocovariances" if judged.verdict == INFINITE else "its autocovariances depend on the step"
+            none = judged.verdict == INFINITE
+            why = "it has no autocovariances" if none else "its autocovariances depend on the step"
             raise Unknown(f"{why}: {judged.reasons[0]}")
         return self.expression
 

@@ -166,8 +166,8 @@ def test_an_appended_component_moves_nobody():
         ),
         (
             "{vector_error_correction: {names: [a, b], relations: [[1, -1]], adjustment: [[0.2], [-0.1]], sd: 1}}",
-            "expected as many unit roots as components less relations (1), all else inside the unit circle, got 1 and a "
-            "root of size 1.3; adjust against a relation",
+            "expected as many unit roots as components less relations (1), all else inside the unit circle, got 1 and "
+            "a root of size 1.3; adjust against a relation",
         ),
     ],
 )
