@@ -18,6 +18,7 @@ from procgen.theory.verdict import Stationarity
 
 NOT_ERGODIC = "not ergodic"
 LONGEST_MEAN = 1_000_000  # steps
+SMALL = 64  # steps
 SAME = 1e-11  # of numbers that can only differ by rounding
 AREA = 1e-9  # of a law, anywhere
 
@@ -39,11 +40,17 @@ class MixedSeries(SeriesTheory):
 
     def _ask(self, node: Node, what: str, *args: Any) -> Any:
         """What the theory at a node answers; Unknown with its reason where it does not know."""
-        series = node.theory[self.name]
-        value = getattr(series, what)(*args)
-        if value is None:
-            raise Unknown(series.reason(what) or f"{what} is not known given the parameters")
-        return value
+        small = all(np.size(arg) <= SMALL for arg in args)  # the same few steps are asked for again and again
+        key = (self.name, what, *((np.shape(arg), np.asarray(arg).tobytes()) for arg in args)) if small else None
+        if key is None or key not in node.known:
+            series = node.theory[self.name]
+            value = getattr(series, what)(*args)
+            if value is None:
+                raise Unknown(series.reason(what) or f"{what} is not known given the parameters")
+            if key is None:
+                return value
+            node.known[key] = value
+        return node.known[key]
 
     def _mean(self, steps: Any) -> NDArray:
         steps = _steps(steps)

@@ -9,7 +9,7 @@ is the product of their rules.
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from itertools import product
 from typing import Any
 
@@ -37,6 +37,7 @@ class Node:
     weight: float
     values: tuple[float, ...]
     theory: Any
+    known: dict[Any, Any] = field(default_factory=dict, compare=False)  # its answers, as they were asked for
 
 
 class Mixture:
