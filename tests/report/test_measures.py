@@ -160,6 +160,9 @@ def test_stated_quantiles_are_exact_or_said_not_to_be():
     found, kind = stated({"exp": [{"constant": 1}, {"ar": {"phi": 0.5, "sd": 0.3}}]}).quantiles(at, levels)
     law = stats.lognorm(0.3 / np.sqrt(0.75), scale=np.e)
     assert kind == "exact" and found.T == pytest.approx(np.array([law.ppf(levels)] * 3))
+    found, kind = stated({"exp": [{"random_walk": {"sd": 0.2, "start": 1}}]}).quantiles(at, levels)  # known at step 0
+    spread = 0.2 * np.sqrt(at) * stats.norm.ppf(levels)[:, None]
+    assert kind == "exact" and found == pytest.approx(np.exp(1 + spread))
     found, kind = stated({"constant": 1}, {"garch": {"omega": 0.2, "alpha": 0.1, "beta": 0.7}}).quantiles(at, levels)
     assert kind == "2 sd" and found[[0, 2, 4], 1] == pytest.approx([-1, 1, 3]) and np.isnan(found[1]).all()
     unknown = {"exp": [{"random_walk": {"sd": 0.1, "law": {"student_t": {"df": 5}}}}]}

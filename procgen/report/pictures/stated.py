@@ -94,10 +94,10 @@ class Stated:
         places = np.unique(np.linspace(0, len(at) - 1, min(len(at), most)).astype(int))
         found = np.empty((len(levels), len(places)))
         for column, i in enumerate(places):
-            law = self.law(int(at[i]))
-            if law is None:
+            law = self.law(int(at[i])) if sd[i] > 0 else None
+            if law is None and sd[i] > 0:
                 return None
-            found[:, column] = law.ppf(np.asarray(levels))
+            found[:, column] = mean[i] if law is None else law.ppf(np.asarray(levels))
         if len(places) == len(at):
             return found, "exact"
         with np.errstate(divide="ignore", invalid="ignore"):
