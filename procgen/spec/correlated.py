@@ -8,6 +8,7 @@ from typing import Any
 import numpy as np
 
 from procgen.spec.declare import INVALID, Domain, Flag, Parameter, Reading, Real, Reals, Records, Schema, read_each
+from procgen.spec.domains import one_or_list
 from procgen.spec.links import Links
 from procgen.spec.model import Correlation
 from procgen.spec.nearest import DECIMALS, nearest
@@ -38,8 +39,9 @@ class Names(Domain):
         return tree.value
 
     def schema(self) -> Schema:
-        most = {"maxItems": self.exactly} if self.exactly else {}
-        return {"type": "array", "items": {"type": "string"}, "minItems": 2, **most}
+        if self.exactly:
+            return {"type": "array", "items": {"type": "string"}, "minItems": 2, "maxItems": self.exactly}
+        return one_or_list({"type": "string"})  # one name may be that of a group
 
 
 class Matrix(Domain):
@@ -94,7 +96,7 @@ def read_correlation(tree: Tree, links: Links, reader: Reading) -> Correlation:
     items = tree.value if tree.is_list else (tree,)
     before = len(reader.faults)
     for item in items:
-        _read_item(item, pairs, reader)
+        _read_item(with_members(item, links), pairs, reader)
     if len(reader.faults) > before or not pairs.order:
         return Correlation()
     if len(pairs.order) > MAX_NAMES:
@@ -115,6 +117,44 @@ def read_correlation(tree: Tree, links: Links, reader: Reading) -> Correlation:
 def _offer(items: Sequence[Tree]) -> str:
     stated = any("matrix" in item.value and "repair" not in item.value for item in items)
     return ", or add repair: true for the nearest one that is" if stated else ""
+
+
+def with_members(tree: Tree, links: Links) -> Tree:
+    """Return an item with the series of a group in the place of its name: `stores.ar` is `.ar` of each of them."""
+    groups: dict[str, list[str]] = {}
+    for name, owner in links.owners.items():
+        if getattr(owner, "group", None):
+            groups.setdefault(owner.group, []).append(name)  # type: ignore[union-attr, arg-type]
+
+    def expanded(inner: Tree) -> Tree:
+        names = [inner] if isinstance(inner.value, str) else list(inner.value) if inner.is_list else []
+        if not any(_group_of(name) in groups for name in names):
+            return inner
+        found: list[Tree] = []
+        for name in names:
+            label = str(name.value).partition(".")[2]
+            members = groups.get(_group_of(name))
+            found += [name] if members is None else [Tree(f"{member}.{label}", name.place) for member in members]
+        return Tree(tuple(found), inner.place)
+
+    if not groups or not tree.is_map:
+        return tree
+    if "within" in tree.value:
+        return Tree({**tree.value, "within": expanded(tree.value["within"])}, tree.place, tree.keys)
+    if "blocks" in tree.value and tree.value["blocks"].is_list:
+        blocks = tree.value["blocks"]
+        made = [
+            Tree({**block.value, "names": expanded(block.value["names"])}, block.place, block.keys)
+            if block.is_map and "names" in block.value
+            else block
+            for block in blocks.value
+        ]
+        return Tree({**tree.value, "blocks": Tree(tuple(made), blocks.place)}, tree.place, tree.keys)
+    return tree
+
+
+def _group_of(name: Tree) -> str:
+    return name.value.partition(".")[0] if isinstance(name.value, str) else ""
 
 
 class _Pairs:

@@ -1,6 +1,8 @@
 """Groups of series: a template, names and a table become ordinary series."""
 
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
 
 from procgen.chance.laws import LAWS
 from procgen.spec.model import SpecError
@@ -107,3 +109,58 @@ def test_faults_of_tables(tmp_path, table, message):
     with pytest.raises(SpecError) as error:
         read(tmp_path, TEXT.replace("series: {total: [{use: north_1}, {use: south_1}]}\n", ""), table)
     assert message in str(error.value)
+
+
+def test_a_correlation_within_a_group():
+    """`shops.ar` names `.ar` of each member; the bodies are named in place, as anyone would write them out."""
+
+    def read_with(correlation):
+        groups = {"shops": {"names": ["a", "b", "c"], "of": [{"ar": {"phi": 0.5, "sd": 1}}]}}
+        raw = {"seed": 1, "paths": 1, "time": {"steps": 2}, "groups": groups, "correlation": correlation}
+        return read_raw({**raw, "series": {"d": [{"white_noise": {"sd": 1}}]}}, catalogue(), LAWS)
+
+    for short, long in (
+        ({"within": "shops.ar", "value": 0.3}, {"within": ["a.ar", "b.ar", "c.ar"], "value": 0.3}),
+        (
+            {"within": ["d.white_noise", "shops.ar"], "value": 0.2},
+            {"within": ["d.white_noise", "a.ar", "b.ar", "c.ar"], "value": 0.2},
+        ),
+        (
+            {"blocks": [{"names": "shops.ar", "value": 0.5}], "across": 0.1},
+            {"blocks": [{"names": ["a.ar", "b.ar", "c.ar"], "value": 0.5}], "across": 0.1},
+        ),
+    ):
+        spec = read_with(short)
+        assert spec.correlation == read_with(long).correlation
+        assert spec.raw["correlation"] == short and read_raw(spec.raw, catalogue(), LAWS) == spec
+    with pytest.raises(SpecError, match=r"there is no term of a named arr; .*did you mean ar\?"):
+        read_with({"within": "shops.arr", "value": 0.3})
+
+
+PIECES = st.recursive(
+    st.sampled_from([None, True, 0.5, -1, "k", "path", "series", "uniform", [0.3, 0.9], [1], []]),
+    lambda inner: st.dictionaries(
+        st.sampled_from(["draw", "over", "parameter", "column", "from_table", "uniform", "normal", "beta", "choice",
+                         "mean", "sd", "within", "key", "values", "file", "value", "per"]), inner, max_size=3),
+    max_leaves=6,
+)  # fmt: skip
+
+
+@settings(max_examples=150, deadline=None)
+@given(PIECES, PIECES, PIECES)
+def test_nearly_a_number_that_varies_is_read_or_refused(number, declared, table):
+    """Never anything but a Spec or a SpecError."""
+    raw = {
+        "seed": 1,
+        "paths": 2,
+        "time": {"steps": 3},
+        "parameters": {"k": declared},
+        "groups": {"g": {"names": ["a"], "table": table, "of": [{"ar": {"phi": number, "sd": 1}, "times": number}]}},
+        "series": {"x": [{"trend": {"level": number, "slope": {"value": number, "per": "step"}}}]},
+    }
+    try:
+        spec = read_raw(raw, catalogue(), LAWS)
+    except SpecError as error:
+        assert str(error)
+        return
+    assert read_raw(spec.raw, catalogue(), LAWS) == spec
