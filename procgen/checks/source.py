@@ -91,7 +91,9 @@ class EnsembleOrigin:
         self.spec, self.columns = with_revealed(self.spec, [c.name for c in ensemble.columns if c.revealed])
 
     def checks(self) -> list[Check]:
-        return []
+        from procgen.checks.parameters import parameter_checks
+
+        return [*parameter_checks(self.ensemble, self.spec)]
 
     def about(self) -> dict[str, Any]:
         """Title, digest and size, for the report."""

@@ -1,9 +1,14 @@
 """Ensembles with drawn parameters against their theory: agreement, recovered shocks, and saboteurs."""
 
 import numpy as np
+import pandas as pd
 import pytest
+from scipy import stats
 
 import procgen as pg
+from procgen.chance.draws import values
+from procgen.checks.parameters import areas
+from procgen.spec.draws import BetaDraw, LognormalDraw, NormalDraw, UniformDraw
 
 FALSE_ALARM = 1e-8  # each, of the suite's 1e-6
 
@@ -14,8 +19,8 @@ def path(law):
 
 RAW = {
     "seed": 12,
-    "paths": 400,
-    "time": {"steps": 60},
+    "paths": 300,
+    "time": {"steps": 40},
     "parameters": {"k": path({"uniform": [0.3, 0.9]})},
     "series": {
         "x": [{"ar": {"phi": {"parameter": "k"}, "sd": 1}}],
@@ -70,3 +75,34 @@ def test_an_ensemble_without_the_spread_between_paths_departs(ensemble):
     spec = pg.load({**RAW, "series": {"y": RAW["series"]["y"]}})
     verdict = pg.validate(pg.render(raw), spec, false_alarm=FALSE_ALARM)
     assert verdict.agrees is False
+
+
+def test_parameters_are_held_against_their_laws_and_their_table(tmp_path):
+    raw = {**RAW, "parameters": {"k": path({"choice": {"values": [0.4, 0.6], "weights": [3, 1]}})}}
+    ensemble = pg.render(raw, out=tmp_path / "out")
+    found = {row.what: row.outcome for row in pg.validate(ensemble, false_alarm=FALSE_ALARM).rows if not row.series}
+    wanted = ("parameter k: share of 0.4", "parameter k: share of 0.6", "parameter k: values", "table of parameters",
+              "parameter y.constant.level: distribution function")  # fmt: skip
+    assert all(found[what] == "agrees" for what in wanted)
+    other = pg.load({**raw, "parameters": {"k": path({"choice": [0.4, 0.6]})}})
+    rows = {row.what: row for row in pg.validate(ensemble, other, false_alarm=FALSE_ALARM).rows}
+    assert rows["parameter k: share of 0.4"].outcome == "departs"
+    table = tmp_path / "out" / "tables" / "parameters.parquet"
+    frame = pd.read_parquet(table)
+    frame.loc[3, "k"] = 0.5
+    frame.to_parquet(table)
+    (row,) = [row for row in pg.validate(tmp_path / "out").rows if row.what == "table of parameters"]
+    assert row.outcome == "departs"
+    assert row.note == "tables/parameters.parquet is not what the spec draws (k); it was changed"
+
+
+@pytest.mark.parametrize("law, frozen", [
+    (UniformDraw((1.0, 3.0)), stats.uniform(1, 2)),
+    (NormalDraw(1.0, 2.0, (0.0, 4.0)), stats.truncnorm(-0.5, 1.5, 1, 2)),
+    (LognormalDraw(2.0, 0.5), stats.lognorm(0.5, scale=2)),
+    (BetaDraw(2.0, 3.0, (1.0, 5.0)), stats.beta(2, 3, 1, 4)),
+], ids=str)  # fmt: skip
+def test_areas_are_those_of_draws(law, frozen):
+    u = np.linspace(0.01, 0.99, 99)
+    assert np.allclose(areas(law, values(law, u)), u, atol=1e-9)
+    assert np.allclose(areas(law, frozen.ppf(u)), u, atol=1e-12)
