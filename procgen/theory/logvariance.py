@@ -29,6 +29,7 @@ NEGLIGIBLE = 1e-18
 FAR = 37.0  # standard deviations of a normal: the area beyond is 1e-299
 PANELS = 256
 MOST_STEPS = 256
+LONGEST_TABLE = 1 << 16  # steps of a path of variances that is kept
 
 
 class LogVariance(Volatility):
@@ -76,8 +77,18 @@ class LogVariance(Volatility):
         return True, f"its log variance is an autoregression with coefficient {self.beta:.6g} (Nelson 1991)"
 
     def variance_path(self, steps):
+        count = int(np.max(steps, initial=0)) + 1
+        if count > LONGEST_TABLE:
+            return self._variance_at(np.asarray(steps, float))
+        kept = self.__dict__.get("_path", np.zeros(0))
+        if len(kept) < count:
+            kept = self._variance_at(np.arange(max(count, 256, min(2 * len(kept), LONGEST_TABLE)), dtype=float))
+            self.__dict__["_path"] = kept
+        return kept[np.asarray(steps, np.int64)]
+
+    def _variance_at(self, steps: np.ndarray) -> np.ndarray:
         assert self.first_log is not None
-        left = self.beta ** np.asarray(steps, float)
+        left = self.beta**steps
         mean = self.mean_log + (self.first_log - self.mean_log) * left
         return np.exp(mean + self.cumulants(np.ones(1))[0] - self.cumulants(left))
 

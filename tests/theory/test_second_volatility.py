@@ -228,3 +228,19 @@ def test_variances_from_a_given_past_are_the_forecasts_of_arch(term, orders, par
     variances = (fitted.conditional_volatility**2).tolist()
     x = series_of(f"{term}before: {{variance: {variances[-3:]}, shocks: {shocks[-3:].tolist()}}}}}")
     np.testing.assert_allclose(x.variance(np.arange(30)), forecast, rtol=1e-10)
+
+
+def test_exponential_garch_from_a_given_variance():
+    """E h(t) = exp(mean + beta^t (l(0) - mean)) times the growths of t shocks, near and far; l(0) by hand."""
+    a, g, b = mp.mpf(0.2), mp.mpf(-0.1), mp.mpf(0.9)
+    x = series_of("egarch: {scale: 1.3, alpha: 0.2, gamma: -0.1, beta: 0.9, before: {variance: 3, shocks: -2}}")
+    with mp.workdps(30):
+        mean, z = mp.log(mp.mpf(1.3) ** 2), -2 / mp.sqrt(3)
+        first = mean + b * (mp.log(3) - mean) + a * (abs(z) - mp.sqrt(2 / mp.pi)) + g * z
+        steps = [0, 1, 5, 300, 1_000_000]
+        exact = [
+            float(mp.exp(mean + b**t * (first - mean)) * mp.fprod(grown(b**i, a, g) for i in range(min(t, 700))))
+            for t in steps
+        ]
+    np.testing.assert_allclose(x.variance(np.array(steps)), exact, rtol=1e-9)
+    np.testing.assert_allclose([float(x.variance(t)) for t in steps], exact, rtol=1e-9)
