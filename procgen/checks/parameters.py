@@ -51,24 +51,30 @@ def _law_checks(what: str, values: NDArray, law: DrawLaw) -> Iterator[Check]:
 
 def areas(law: DrawLaw, x: NDArray) -> NDArray:
     """The area of a law of draws below x."""
-    from scipy import stats
+    from scipy.special import betainc
 
     if isinstance(law, UniformDraw):
-        return stats.uniform(law.low, law.high - law.low).cdf(x)
+        return (x - law.low) / (law.high - law.low)
     if isinstance(law, BetaDraw):
-        return stats.beta(law.alpha, law.beta, law.low, law.high - law.low).cdf(x)
+        return betainc(law.alpha, law.beta, (x - law.low) / (law.high - law.low))
     if isinstance(law, LognormalDraw):
-        ends = None if law.within is None else tuple(np.log(np.array(law.within) / law.median) / law.sigma)
+        ends = None if law.within is None else np.log(np.array(law.within) / law.median) / law.sigma
         return _cut(np.log(x / law.median) / law.sigma, ends)
     assert isinstance(law, NormalDraw)
-    ends = None if law.within is None else tuple((end - law.mean) / law.sd for end in law.within)
+    ends = None if law.within is None else (np.array(law.within) - law.mean) / law.sd
     return _cut((x - law.mean) / law.sd, ends)
 
 
-def _cut(z: NDArray, ends: tuple[float, ...] | None) -> NDArray:
-    from scipy import stats
+def _cut(z: NDArray, ends: NDArray | None) -> NDArray:
+    """The area of the standard normal law below z, of what lies between two ends; on the side where it is small."""
+    from scipy.special import ndtr
 
-    return stats.norm.cdf(z) if ends is None else stats.truncnorm(*ends).cdf(z)
+    if ends is None:
+        return ndtr(z)
+    low, high = ends
+    if low + high > 0.0:
+        return 1.0 - _cut(-z, np.array([-high, -low]))
+    return (ndtr(z) - ndtr(low)) / (ndtr(high) - ndtr(low))
 
 
 def _table(ensemble: Any, drawn: Any) -> Check:

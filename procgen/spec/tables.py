@@ -105,6 +105,8 @@ def _has(table: Columns, names: Sequence[str], tree: Tree, reader: Reading) -> b
 
 def read_file(tree: Tree, reader: Reading) -> Any:
     """Return the columns of the file named at `tree`, by name, or INVALID after reporting why it cannot be read."""
+    if not isinstance(tree.value, str):
+        return reader.expected(tree, "the path of a CSV or Parquet file")
     path = Path(tree.value)
     if tree.place.file and not path.is_absolute():
         path = Path(tree.place.file).parent / path

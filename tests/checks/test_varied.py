@@ -99,6 +99,7 @@ def test_parameters_are_held_against_their_laws_and_their_table(tmp_path):
 @pytest.mark.parametrize("law, frozen", [
     (UniformDraw((1.0, 3.0)), stats.uniform(1, 2)),
     (NormalDraw(1.0, 2.0, (0.0, 4.0)), stats.truncnorm(-0.5, 1.5, 1, 2)),
+    (NormalDraw(0.0, 1.0, (7.0, 9.0)), stats.truncnorm(7, 9)),
     (LognormalDraw(2.0, 0.5), stats.lognorm(0.5, scale=2)),
     (BetaDraw(2.0, 3.0, (1.0, 5.0)), stats.beta(2, 3, 1, 4)),
 ], ids=str)  # fmt: skip
