@@ -165,7 +165,7 @@ def _law(facts: dict[str, Any]) -> list[str]:
         lines.append(f"excess kurtosis {number(facts['excess_kurtosis'])}")
     elif facts["gaussian"] and any(facts["variance"] or []):
         lines.append("jointly Gaussian")
-    if isinstance(facts["highest_moment"], float):
+    if isinstance(facts["highest_moment"], float) and facts["highest_moment"] > 0.0:
         lines.append(f"moments below order {number(facts['highest_moment'])} exist")
     return _wrapped(["; ".join(lines)]) if lines else []
 

@@ -107,11 +107,9 @@ class Space:
                 raise Unknown(a.reason)
             if a.kind == PROCESS:
                 raise Unknown(f"{a.detail.name} has a memory of its own")
-            if np.isfinite(a.variance):
-                return a.variance
-            if a.path is None or a.detail.total < 1.0:
+            if not np.isfinite(a.variance):
                 raise Unknown(f"infinite variance of {_named(a)}")
-            return float(a.path(np.zeros(1, np.int64))[0])  # it grows from there along its path
+            return a.variance
         if not self.dependent(a, b):
             return 0.0
         for one in (a, b):

@@ -212,7 +212,7 @@ def _of_filters(space: Space, forms: Sequence[Linear]) -> System:
     if n > LARGEST_STATE:
         raise Unknown(f"its state has {n} elements, more than {LARGEST_STATE}")
     sources = list(dict.fromkeys(base.source for base in layout.depth))
-    noise = np.array([[space.covariance(a, b) for b in sources] for a in sources])
+    noise = np.array([[_at_a_step(space, a, b) for b in sources] for a in sources])
     noise = noise.reshape(len(sources), len(sources))
     transition, loading = np.zeros((n, n)), np.zeros((n, len(sources)))
     for base, depth in layout.depth.items():
@@ -303,13 +303,20 @@ def _initial(space: Space, layout: _Layout, sources: list[Source]) -> np.ndarray
 def _lag_block(space: Space, a: Base, rows: int, b: Base, columns: int) -> np.ndarray:
     """E w_a(-i) w_b(-j) for i < rows, j < columns."""
     block = np.zeros((rows, columns))
-    scale = space.covariance(a.source, b.source)
+    scale = _at_a_step(space, a.source, b.source)
     if not a.started and not b.started:
         lags = np.arange(columns)[None, :] - np.arange(rows)[:, None]
         return scale * cross_covariance(a.phi, b.phi)(lags) if scale else block
     path = a.source.path if a.source is b.source else None
     block[0, 0] = scale if path is None else float(path(np.zeros(1, np.int64))[0])
     return block
+
+
+def _at_a_step(space: Space, a: Source, b: Source) -> float:
+    """E a(t) b(t); at step 0 for a source whose variance grows from there along its path, without a limit."""
+    if a is b and a.path is not None and np.isinf(a.variance) and a.detail.total >= 1.0:
+        return float(a.path(np.zeros(1, np.int64))[0])
+    return space.covariance(a, b)
 
 
 def _noise_path(sources: list[Source]) -> Callable[[np.ndarray], np.ndarray] | None:

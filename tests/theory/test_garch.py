@@ -241,3 +241,14 @@ def test_skewed_garch_is_not_uncorrelated_with_its_variance(axis):
     garch = axis.garch("x.garch", EXPONENTIAL, 0.1, (0.1,), (0.5,))
     cross = CrossTheory(SeriesTheory("x", garch), SeriesTheory("h", garch.hidden("variance")))
     assert cross.covariance(1, 3) is None and "skewed" in cross.reason()
+
+
+def test_a_garch_that_grows_has_variances_but_no_limit_of_them(axis):
+    """E h(t) written out from 2 on: omega + 1.02 E h(t - 1); what speaks of ever is unknown."""
+    x = series(axis, (0.15,), (0.87,), 0.3, before_variance=(2.0,))
+    path = [0.3 + 1.02 * 2.0]
+    for _ in range(20):
+        path.append(0.3 + 1.02 * path[-1])
+    np.testing.assert_allclose(x.variance(np.arange(21)), path, rtol=1e-13)
+    assert x.covariance(7, 3) == 0.0 and x.forecast_variance([1, 5]) is None
+    assert "infinite variance" in x.reason("forecast_variance")
