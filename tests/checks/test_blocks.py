@@ -1,0 +1,52 @@
+"""Sums in a fixed order against plain ones, bit for bit however they are cut; uniforms against SciPy."""
+
+import math
+
+import numpy as np
+from scipy.special import ndtr
+
+from procgen.checks.blocks import Window, across, add_lagged, add_products
+from procgen.checks.scores import BINS
+from procgen.checks.uniforms import bin_counts, uniforms
+
+
+def test_products_are_those_of_fsum_whatever_the_tiles_and_the_width():
+    x = np.random.default_rng(1).standard_normal((400, 48))
+    x[7, 3] = np.nan
+    found = []
+    for paths, height in ((48, 400), (48, 64), (16, 128), (32, 192)):
+        total, window, pairs = np.zeros(paths), Window(5, paths), 0
+        for start in range(0, 400, height):
+            tile = x[start : start + height, :paths]
+            view = window.push(tile)
+            pairs += add_lagged(total, view, view, 5, len(tile))
+        known = np.isfinite(x[5:, :paths] * x[:-5, :paths])
+        assert pairs == np.count_nonzero(known) == 395 * paths - 2
+        found.append(total[:16])
+    exact = [math.fsum(p for p in x[5:, k] * x[:-5, k] if not math.isnan(p)) for k in range(16)]
+    for total in found:
+        np.testing.assert_array_equal(total, found[0])
+        np.testing.assert_allclose(total, exact, rtol=1e-12, atol=1e-12)
+
+
+def test_a_tile_may_begin_within_a_block():
+    x = np.random.default_rng(2).standard_normal((200, 16))
+    whole, late = np.zeros(16), np.zeros(16)
+    add_products(whole, np.vstack([np.zeros((30, 16)), x[30:]]), None)
+    add_products(late, x[30:], None, 30)
+    np.testing.assert_array_equal(whole, late)
+
+
+def test_a_range_of_paths_is_the_sum_of_its_halves():
+    x = np.random.default_rng(3).standard_normal((3, 64))
+    np.testing.assert_array_equal(across(x), across(x[:, :32]) + across(x[:, 32:]))
+    np.testing.assert_allclose(across(x[:, :37]), x[:, :37].sum(axis=1), rtol=1e-12)
+
+
+def test_uniforms_against_scipy():
+    g = np.concatenate([np.linspace(-12, 12, 40_000), np.random.default_rng(4).standard_normal(25_536)]).reshape(64, -1)
+    u = uniforms(g).copy()
+    np.testing.assert_allclose(u, ndtr(g), rtol=0, atol=3e-9)
+    counts = np.bincount(np.minimum((ndtr(g) * BINS).astype(int), BINS - 1).ravel(), minlength=BINS)
+    assert np.abs(bin_counts(u) - counts).sum() <= 8  # a few lie within 3e-9 of an edge
+    assert np.isnan(uniforms(np.full((1, 2), np.nan))).all()
