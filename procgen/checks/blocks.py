@@ -107,9 +107,7 @@ class Window:
         self._rows, self._end = rows, self.held
 
 
-def add_lagged(
-    total: NDArray, later: NDArray, earlier: NDArray, lag: int, steps: int, offset: int = 0
-) -> int:
+def add_lagged(total: NDArray, later: NDArray, earlier: NDArray, lag: int, steps: int, offset: int = 0) -> int:
     """`add_products` of later[t] · earlier[t − lag] for the last `steps` steps of two windows' views.
 
     Both views end at the same step. Steps whose partner is not there are left out.

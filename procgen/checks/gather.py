@@ -44,7 +44,9 @@ class Plan:
             (column, i, j) for column, plan in enumerate(self.series) for i, j in [*_diagonal(plan), *plan.pairs]
         ]
         self.moment_pairs = [
-            (int(at) + i, int(at) + j) for at, size in zip(self.offset, sizes, strict=False) for i in range(size)
+            (int(at) + i, int(at) + j)
+            for at, size in zip(self.offset, sizes, strict=False)
+            for i in range(size)
             for j in range(i, size)
         ]
         between = {

@@ -116,9 +116,7 @@ class ShockSums:
             self.cluster[0, i] += add_lagged(total, squares, squares, lag, len(g), offset)
         self.asymmetry[0] += add_lagged(lane.totals[4], squares, lane.view, 1, len(g), offset)
 
-    def _across(
-        self, g: NDArray, known: NDArray, whole: bool, first_step: int, lane: ShockLane, offset: int
-    ) -> None:
+    def _across(self, g: NDArray, known: NDArray, whole: bool, first_step: int, lane: ShockLane, offset: int) -> None:
         """Profile by step, and products with the neighbouring path of the same lane group."""
         paths = g.shape[1]
         counts = np.full(len(g), float(paths)) if whole else known.sum(axis=1).astype(float)

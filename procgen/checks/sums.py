@@ -46,9 +46,7 @@ class Moments:
         while len(n) > 1:
             if len(n) % 2:
                 n, mean, products = (np.concatenate([x, np.zeros_like(x[:1])]) for x in (n, mean, products))
-            n, mean, products = self._joined(
-                n[0::2], mean[0::2], products[0::2], n[1::2], mean[1::2], products[1::2]
-            )
+            n, mean, products = self._joined(n[0::2], mean[0::2], products[0::2], n[1::2], mean[1::2], products[1::2])
         self._add(n, mean, products)
 
     def merge(self, other: Moments) -> None:

@@ -74,9 +74,7 @@ def specs(paths: int, steps: int, longest: int) -> dict[str, str]:
     found["sum of 5"] = f"{head}  x:\n{SUM}"
     names = [f"s{k:02d}" for k in range(20)]
     series = [f"  {name}: [{{ar: {{phi: {0.3 + 0.03 * k:.2f}, sd: 1}}}}]" for k, name in enumerate(names)]
-    pairs = [
-        f"  - {{between: [{a}.ar, {b}.ar], value: 0.3}}" for a, b in pairwise(names)
-    ]
+    pairs = [f"  - {{between: [{a}.ar, {b}.ar], value: 0.3}}" for a, b in pairwise(names)]
     twenty = head.replace(f"paths: {paths}", f"paths: {paths // 16}")
     found["20 series"] = "\n".join([twenty + series[0], *series[1:], "correlation:", *pairs, ""])
     one = SPEC.format(paths=1, steps=longest, term=TERMS["ar2"])
