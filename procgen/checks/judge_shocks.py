@@ -55,7 +55,7 @@ def _level_and_spread(series: str, sums: ShockSums, source: str) -> Iterator[Che
     m4 = law.moment(4) if n > 1 and no_big_jump(law, n, 2) else None
     if m4 is not None:
         # Around the sample's mean: one summand less, as for normal shocks.
-        error = math.sqrt((m4 - 1) / (n - 1))
+        error = math.sqrt((m4 - 3) / n + 2 / (n - 1))
         spread = (second - mean * mean) * n / (n - 1)
         finding = sum_finding((spread - 1) / error, n - 1, sums.scores.summand(2, n), error, theory=1.0)
         yield Check.of(series, "shocks: variance", "all steps", "spread", finding)

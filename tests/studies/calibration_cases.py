@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.chance.laws import LAWS
-from procgen.checks import judge, judge_shocks, tails
+from procgen.checks import judge, judge_shocks
 from procgen.checks.judge import Finding, Sample
 from procgen.checks.scores import BINS, Scores, cluster_scores
 from procgen.checks.shocks import CrossSums, ShockSums
@@ -168,8 +168,7 @@ def darling(n: int) -> Findings:
         u = np.sort(rng.random((count, n)), axis=1)
         return -n - (np.log(u) + np.log1p(-u[:, ::-1])) @ weights
 
-    # The statistic in reverse: its finding depends on uniforms through A² alone.
-    return of_one_number(draw, lambda a2: Finding(1.0, a2, 1.0, tails.anderson_darling(a2), _nothing), 1.0, 0.76)
+    return of_one_number(draw, lambda a2: judge.darling(a2, n), 1.0, 0.76)
 
 
 def gap(n: int) -> Findings:
