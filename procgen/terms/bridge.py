@@ -97,7 +97,8 @@ class Bridge(Term):
             return self.sd**2 * np.minimum(t, s) * np.maximum(end - np.maximum(t, s), 0.0) / end
 
         pinned = f"{self.address} is pinned at both ends"
-        return axis.stated(self.address, NORMAL, mean, covariance, gaussian=True, varies=pinned)
+        rests = axis.horizon > end + 1.0  # at its end, for the steps that are left
+        return axis.stated(self.address, NORMAL, mean, covariance, gaussian=True, varies=pinned, lumpy=rests)
 
     def equation(self, *inputs):
         step = f"x[t−1] + ({number(self.end)} − x[t−1])/(T − t + 1) + {number(self.sd)} √((T − t)/(T − t + 1)) z[t]"

@@ -25,6 +25,12 @@ class MixedLaw:
             total = total + weight * getattr(law, what)(x)
         return total
 
+    @property
+    def spacing(self) -> float:
+        """The distance of neighbouring values where only such have a chance, else 0; inf where laws differ in it."""
+        found = {float(getattr(law, "spacing", 0.0)) for law in self.laws}
+        return found.pop() if len(found) == 1 else float("inf")
+
     def pdf(self, x: Any) -> NDArray:
         return self._sum("pdf", x)
 
@@ -80,6 +86,8 @@ class Normal:
 
 class MixedNormals(MixedLaw):
     """The same of normal laws, all at once."""
+
+    spacing = 0.0  # type: ignore[assignment]
 
     def __init__(self, weights: Sequence[float], means: Sequence[float], sds: Sequence[float]):
         super().__init__(weights, ())

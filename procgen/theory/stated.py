@@ -63,6 +63,9 @@ class Stated(Process):
         return scale * other * apart, scale * other * (self._moment(t, a, s, b) - apart)
 
     def marginal(self, step):
+        at = np.array([step], np.int64)
+        if float(self.covariance(at, at)[0]) <= 0.0:
+            raise Unknown("the value at that step is known, not random")
         return super().marginal(step) if self._law is None else Centred(self._law(step))
 
 

@@ -123,6 +123,11 @@ def test_rounding_is_taken_in_exactly():
         assert len(shocks) > 10 and found.agrees is not False, found.to_text()
 
 
+def test_a_bridge_may_rest_at_a_whole_number():
+    bridge = {"bridge": {"start": 3, "end": 5, "until": 10, "sd": 1}}
+    assert pg.validate(pg.render(spec(bridge, paths=100, steps=400)), false_alarm=FALSE_ALARM).agrees
+
+
 def test_equal_paths_of_little_demand_are_no_copies():
     rare = {"intermittent": {"share": 0.02, "size": 4, "sd": 2}}
     found = pg.validate(pg.render(spec(rare, paths=200, steps=10)), false_alarm=FALSE_ALARM)
