@@ -245,7 +245,26 @@ def integrated(values: dict, x: float) -> dict:
     return walking(values, x)
 
 
+def coming(values: dict, x: float) -> dict:
+    """Demand whose sizes have a law, as gamma sizes or as counts."""
+    sizes = {"size": 3 + x, "sd": 2 * x} if x < 0.5 else {"size": 1 + x, "law": "counts"}
+    return {"share": x, "stay": 10, **sizes}
+
+
+def rare(values: dict, x: float) -> dict:
+    """Jumps that are few enough to be drawn one by one."""
+    return values | {"rate": x}
+
+
+def arriving(values: dict, x: float) -> dict:
+    """An end after step 0."""
+    return values | {"until": 3 + abs(values["until"])}
+
+
 MEND = {
+    "intermittent": coming,
+    "compound_poisson": rare,
+    "bridge": arriving,
     "event": shifting,
     "calendar": counting,
     "flag": switching,
