@@ -28,6 +28,9 @@ class Symbol(float):
     def __neg__(self) -> Symbol:
         return Symbol(-float(self), f"-{self.name}")
 
+    def __add__(self, other: Any) -> Any:
+        return self if other == 0 else float(self) + other
+
     def __lt__(self, other: Any) -> bool:
         return other != 0 and float(self) < other  # a name has its sign in itself
 

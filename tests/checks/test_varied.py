@@ -59,11 +59,7 @@ def test_the_same_process_of_another_seed_agrees_without_shocks(ensemble):
     assert any("not known of data" in row.note for row in rows(verdict, "x", "untestable"))
 
 
-@pytest.mark.parametrize("wrong", [
-    {"uniform": [0.3, 0.7]},
-    {"uniform": [0.5, 0.9]},
-    {"choice": [0.6]},
-])  # fmt: skip
+@pytest.mark.parametrize("wrong", [{"uniform": [0.3, 0.75]}, {"choice": [0.6]}])
 def test_another_law_of_the_parameter_departs(ensemble, wrong):
     """A saboteur: paths of another coefficient's law, the same in seed and in everything else."""
     spec = pg.load({**RAW, "parameters": {"k": path(wrong)}})

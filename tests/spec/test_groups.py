@@ -146,7 +146,7 @@ PIECES = st.recursive(
 )  # fmt: skip
 
 
-@settings(max_examples=150, deadline=None)
+@settings(max_examples=60, deadline=None)
 @given(PIECES, PIECES, PIECES)
 def test_nearly_a_number_that_varies_is_read_or_refused(number, declared, table):
     """Never anything but a Spec or a SpecError."""
