@@ -235,6 +235,30 @@ def test_theory_of_intermittent_demand_is_that_of_its_chain(text):
         np.testing.assert_allclose(x.autocovariance_of_squares(np.array([lag])), exact, rtol=1e-8)
 
 
+def test_forecasts_of_demand_and_counts():
+    """By powers of the chain from what was there last; a known mean of Poisson counts is their variance, too."""
+    graph = graph_of(
+        "  x: {intermittent: {share: 0.2, stay: 4, size: 12, sd: 6}}\n"
+        "  y: {poisson: {mean: 4, of: [{seasonal: {period: 4, profile: [0, 1, 0, -1]}}]}}\n"
+        "  z: {zero_inflated: {of: [{use: y}], share: 0.25}}"
+    )
+    run = Run(graph, 0, 30)
+    now = run.tile(10)["x"][-1] > 0
+    answer = forecast(run, "x", 3)
+    chain, power = np.array([[0.9375, 0.0625], [0.25, 0.75]]), np.eye(2)
+    for h in range(3):
+        power = power @ chain
+        p = power[now.astype(int), 1]
+        np.testing.assert_allclose(answer.mean[h], 12 * p, rtol=1e-12)
+        np.testing.assert_allclose(answer.variance[h], p * 180 - 144 * p * p, rtol=1e-12)
+    mean = 4 * np.exp([[0], [-1], [0]])
+    counts, inflated = forecast(run, "y", 3), forecast(run, "z", 3)
+    np.testing.assert_allclose(counts.mean, mean)
+    np.testing.assert_allclose(counts.variance, mean)
+    np.testing.assert_allclose(inflated.mean, 0.75 * mean)
+    np.testing.assert_allclose(inflated.variance, 0.75 * (mean + mean**2) - (0.75 * mean) ** 2)
+
+
 def test_zero_inflation_is_lamberts_law():
     """Lambert (1992): P(0) = π + (1 − π) P(0), the other chances times 1 − π."""
     x = known("zero_inflated: {of: [{negative_binomial: {mean: 4, size: 2}}], share: 0.3}")

@@ -128,6 +128,21 @@ def test_merton_is_a_mixture_of_lognormal_laws():
     np.testing.assert_allclose(x.covariance([t], [12]), grown * early, rtol=1e-11)
 
 
+def test_forecast_of_merton_is_a_mixture_on_what_it_is_now():
+    graph = graph_of("  x: {merton: {drift: 0.01, sd: 0.1, rate: 0.3, jump_mean: -0.1, jump_sd: 0.2, start: 50}}")
+    run = Run(graph, 0, 5)
+    now, answer = run.tile(20)["x"][-1], forecast(run, "x", 2)
+    n = np.arange(60)
+    for h in (1, 2):
+        drift = (0.01 - 0.005 - 0.3 * (np.exp(-0.1 + 0.02) - 1)) * h
+        weight = stats.poisson(0.3 * h).pmf(n)
+        given = stats.lognorm(np.sqrt(0.01 * h + 0.04 * n), scale=np.exp(drift - 0.1 * n))
+        mean = weight @ given.mean()
+        np.testing.assert_allclose(answer.mean[h - 1], now * mean, rtol=1e-11)
+        variance = weight @ (given.var() + given.mean() ** 2) - mean**2
+        np.testing.assert_allclose(answer.variance[h - 1], now**2 * variance, rtol=1e-9)
+
+
 def test_merton_values_are_their_parts():
     graph = graph_of(
         "  x: {merton: {drift: 0.01, sd: 0.1, rate: 0.3, jump_mean: -0.1, jump_sd: 0.2, start: 50}}\n"
