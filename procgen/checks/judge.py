@@ -16,6 +16,7 @@ from numpy.typing import ArrayLike, NDArray
 from procgen.checks import power, tails
 
 FEW_PATHS = 100  # below this many paths no central limit theorem over paths is trusted
+_PLACES = tuple(4.0 * 1.05**k for k in range(40))  # standard errors, at which a tail that falls is made sure of
 _TRUSTED = 0.5  # the largest relative error of a tail (as a logarithm) that still counts as known
 
 
@@ -53,7 +54,7 @@ def unit(z: float, error: float, theory: float = 0.0, skew: float = 0.0, excess:
     The estimate is theory + z·error. The matched chi-square has an excess of its own; what is above it lifts the tail.
     """
     more = max(excess - 1.5 * skew * skew, 0.0)
-    log_p = min(0.0, tails.two_sided(*tails.pearson3(z, skew)) + tails.lift(z, more))
+    log_p = min(0.0, _falling(lambda x: tails.two_sided(*tails.pearson3(x, skew)) + tails.lift(x, more), z))
     return Finding(
         theory, theory + z * error, error, log_p, lambda level: power.shift(level, error, abs(skew), excess)
     )
@@ -130,13 +131,16 @@ class Sample:
         return replace(self, mean=self.mean * factor, sd=self.sd * factor)
 
 
-def sample_mean(sample: Sample, theory: float, sd: float | None = None, hidden: float = 0.0) -> Finding:
+def sample_mean(
+    sample: Sample, theory: float, sd: float | None = None, hidden: float = 0.0, times: float = 1.0
+) -> Finding:
     """The mean of n independent numbers that need not be normal; `sample.mean` is relative to `theory`.
 
     With the theoretical `sd` the tail is that of a matched chi-square; without it, the self-normalised sum's.
-    `hidden` is a skewness that the numbers may have though this sample does not show it.
+    `hidden` is a skewness that the numbers may have though this sample does not show it; `times` the
+    skewness that it does show is allowed for.
     """
-    return _known_sd(sample, theory, sd) if sd is not None else _studentised(sample, theory, hidden)
+    return _known_sd(sample, theory, sd) if sd is not None else _studentised(sample, theory, hidden, times)
 
 
 def _known_sd(sample: Sample, theory: float, sd: float) -> Finding:
@@ -149,26 +153,35 @@ def _known_sd(sample: Sample, theory: float, sd: float) -> Finding:
     z = sample.mean / error
     z -= math.copysign(min(abs(z), sample.gap / (2 * n * error)), z)
     short, doubtful = max(1.5 * sample.skew**2 - sample.excess, 0.0), math.sqrt(6.0) / n
-    skew = sample.skew / math.sqrt(n) + short * z / n
     excess = abs(sample.excess - 1.5 * sample.skew**2)
-    sides = (tails.pearson3(z, skew - doubtful), tails.pearson3(z, skew + doubtful))
-    log_p = max(tails.two_sided(*side) for side in sides) + tails.lift(z, excess / n)
+
+    def log_p(z: float) -> float:
+        skew = sample.skew / math.sqrt(n) + short * z / n
+        sides = (tails.pearson3(z, skew - doubtful), tails.pearson3(z, skew + doubtful))
+        return max(tails.two_sided(*side) for side in sides) + tails.lift(z, excess / n)
+
     return Finding(
         theory,
         theory + sample.mean,
         error,
-        min(0.0, log_p),
-        lambda level: power.shift(level, error, abs(skew) + doubtful, excess / n),
+        min(0.0, _falling(log_p, z)),
+        lambda level: error * (power.passes(lambda z: _falling(log_p, z), level) + power.Z_POWER),
         lambda level: _few(n) or excess_doubt(excess, n, "paths")(level),
     )
 
 
-def _studentised(sample: Sample, theory: float, hidden: float) -> Finding:
+def _falling(log_p: Callable[[float], float], z: float) -> float:
+    """The least p that is given at z or nearer to 0: a tail never rises, but what is put on it far out may."""
+    nearer = [math.copysign(x, z) for x in _PLACES if x < abs(z)]
+    return min(map(log_p, [*nearer, z]))
+
+
+def _studentised(sample: Sample, theory: float, hidden: float, times: float) -> Finding:
     n, error = sample.n, sample.sd / math.sqrt(sample.n)
     t = sample.mean / error
     x = t / math.sqrt((n - 1 + t * t) / n)
-    log_p = tails.two_sided(*tails.self_normalised(x, sample.skew, n))
-    gauge = abs(sample.skew) / (3 * math.sqrt(n))
+    log_p = tails.two_sided(*tails.self_normalised(x, times * sample.skew, n))
+    gauge = times * abs(sample.skew) / (3 * math.sqrt(n))
 
     def doubt(level: float) -> str | None:
         if max(gauge, hidden / (3 * math.sqrt(n))) * power.needed(level) ** 3 > 1.0:
@@ -227,6 +240,12 @@ def excess_doubt(excess: float, n: int, what: str) -> Callable[[float], str | No
 
 def with_doubt(finding: Finding, doubt: Callable[[float], str | None]) -> Finding:
     return replace(finding, doubt=doubt)
+
+
+def of_scale(finding: Finding) -> Finding:
+    """The finding of a spread, whose estimate is the less certain the larger it is."""
+    error, theory, plain = finding.standard_error, finding.theory, finding.detect
+    return replace(finding, detect=lambda level: power.of_scale(plain(level) or math.inf, error, theory))
 
 
 def reach_of_worst(level: float, n: int) -> float:

@@ -116,7 +116,10 @@ def _limit(
     if sample.n < FEW_PATHS or sample.sd == 0.0:
         note = f"only {sample.n} paths: reported, not judged"
         return Check(plan.name, what, probe, kind, theory, theory + sample.mean, outcome="reported", note=note)
-    return Check.of(plan.name, what, probe, kind, judge.sample_mean(sample, theory, sd, hidden))
+    finding = judge.sample_mean(sample, theory, sd, hidden)
+    if kind == "spread":
+        finding = judge.of_scale(finding)
+    return Check.of(plan.name, what, probe, kind, finding)
 
 
 def _covariances(gather: Gather, column: int) -> Iterator[Check]:

@@ -179,8 +179,8 @@ def error_moments(stated: Any, drawn_body: Any, steps: int) -> tuple[float, floa
     route = plan_of(spec_of(stated, 8, steps, 1)).routes["x"]
     unit, at = np.eye(steps), np.arange(steps)
     mean = theory(spec := spec_of(drawn_body, 8, steps, 1), build(spec))["x"].mean(at)
-    base, _ = route.tile(np.zeros((steps, steps)), route.start(steps), 0, 0)
-    matrix = route.tile(unit, route.start(steps), 0, 0)[0] - base
+    base, _ = route.tile(np.zeros((steps, steps)), route.start(0, steps), 0, 0)
+    matrix = route.tile(unit, route.start(0, steps), 0, 0)[0] - base
     gamma = theory(spec, build(spec))["x"].covariance(at[:, None], at[None, :])
     errors = matrix @ gamma @ matrix.T
     offset = matrix @ mean + base[:, 0]
