@@ -130,7 +130,7 @@ def _durations(durations: Mapping[str, Stay], names: Sequence[str]) -> Iterable[
         elif stay.mean < stay.stages:
             what = f"expected a mean of at least {stay.stages} steps for {name}, got {number(stay.mean)}"
             yield "durations", f"{what}; each stage lasts a step or more"
-    total = sum(stay.stages for stay in durations.values())
+    total = int(added(stay.stages for stay in durations.values()))
     if total > MOST_STATES:
         yield "durations", f"expected at most {MOST_STATES} stages in all, got {total}"
 
