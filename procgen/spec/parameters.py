@@ -13,10 +13,11 @@ from typing import Any
 
 from procgen.spec.declare import INVALID, Choice, Parameter, Real, read_each
 from procgen.spec.domains import FORMS, Reading
-from procgen.spec.draws import DrawOf
+from procgen.spec.draws import DrawOf, TableDraw
+from procgen.spec.model import Spec
 from procgen.spec.tables import TABLE, read_lookup
 from procgen.spec.tree import Tree
-from procgen.spec.varying import PATH, SERIES, Varying
+from procgen.spec.varying import PATH, SERIES, Varying, varying_of
 from procgen.spec.words import did_you_mean, one_of
 
 DRAWN = (
@@ -139,3 +140,18 @@ def _looked_up(form: str, names: Values, what: str, mend: str, tree: Tree, reade
     listed = f"expected {one_of(list(names)[:20])}" if names else mend
     reader.fault(tree.value[form], f"there is no {what} named {name[:100]}; {listed}" + (f"; {hint}" if hint else ""))
     return INVALID
+
+
+def check_tables(tree: Tree, spec: Spec, reader: Reading) -> None:
+    """Report tables that have no value for a path or a series of a spec."""
+    for owner, varying in varying_of(spec):
+        law = varying.law
+        if not isinstance(law, TableDraw):
+            continue
+        name = varying.key(owner)
+        if law.by_series and owner not in law.values:
+            reader.fault(tree, f"the table of {name} has no value for {owner}; add a row, or take it out of there")
+        elif not law.by_series and len(law.values) < spec.paths:
+            what = f"the table of {name} has values of {len(law.values):,} paths, and there are {spec.paths:,}"
+            reader.fault(tree.key("paths"), f"{what}; add rows, or ask for fewer paths")
+            return

@@ -15,7 +15,7 @@ from procgen.spec.entries import SERIES_KEYS, read_body, read_name
 from procgen.spec.groups import read_groups
 from procgen.spec.links import Links
 from procgen.spec.model import Correlation, Entry, Fault, Frozen, Place, Series, Shared, Spec, SpecError
-from procgen.spec.parameters import Known, read_section, read_varying
+from procgen.spec.parameters import Known, check_tables, read_section, read_varying
 from procgen.spec.timegrid import MOST, read_time
 from procgen.spec.tree import TooMuch, Tree, from_data
 from procgen.spec.varying import Varying
@@ -175,7 +175,7 @@ def _spec(tree: Tree, reader: Reader, file: str | None) -> Spec | None:
     if reader.faults or reader.grid is None:
         return None
     check_size(tree, head["paths"], reader.grid.steps, len(series), reader)
-    return Spec(
+    spec = Spec(
         head["title"],
         head["seed"],
         head["paths"],
@@ -187,6 +187,8 @@ def _spec(tree: Tree, reader: Reader, file: str | None) -> Spec | None:
         file=file,
         parameters=Frozen(parameters),
     )
+    check_tables(tree, spec, reader)
+    return spec
 
 
 def change(spec: Spec, **values: int) -> Spec:
@@ -201,7 +203,11 @@ def change(spec: Spec, **values: int) -> Spec:
         check_size(tree, head["paths"], grid.steps, len(spec.series), reader)
     if reader.faults or grid is None:
         raise _error(reader.faults)
-    return replace(spec, seed=head["seed"], paths=head["paths"], time=grid, raw=tree.plain())
+    changed = replace(spec, seed=head["seed"], paths=head["paths"], time=grid, raw=tree.plain())
+    check_tables(tree, changed, reader)
+    if reader.faults:
+        raise _error(reader.faults)
+    return changed
 
 
 def check_size(tree: Tree, paths: int, steps: int, series: int, reader: Reader) -> None:

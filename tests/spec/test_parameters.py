@@ -99,8 +99,8 @@ def test_raw_and_digest():
      "this number cannot vary, numbers of terms can; write a number above 2\n"
      "  at series.x[0].white_noise.law.student_t.df"),
     ({"seasonal": {"period": by_path(UNIFORM), "harmonics": [{"amplitude": 1}]}},
-     "period cannot vary, only numbers can; write a length of time above 0: a number of steps, or a text such as 15min, "
-     "1d, 2 weeks\n  at series.x[0].seasonal.period"),
+     "period cannot vary, only numbers can; write a length of time above 0: a number of steps, or a text such as "
+     "15min, 1d, 2 weeks\n  at series.x[0].seasonal.period"),
     ({"constant": {"draw": {"uniform": [2, 1]}, "over": "path"}},
      "expected two numbers, the lower one first, as in [0.3, 0.9], got a list of 2; got 2 and 1 (between: the ends)\n"
      "  at series.x[0].constant.draw.uniform"),
@@ -164,3 +164,17 @@ def test_faults_of_tables(tmp_path, table, message):
     with pytest.raises(SpecError) as error:
         read_text(text, catalogue(), LAWS, str(tmp_path / "spec.yaml"))
     assert message in str(error.value) or message.split(",")[0] in str(error.value)
+
+
+def test_a_table_must_have_every_path_and_series():
+    table = {"from_table": {"key": "path", "values": [0.1, 0.2, 0.3]}}
+    (told,) = faults([{"constant": table}])
+    assert told == (
+        "the table of x.constant.level has values of 3 paths, and there are 10; add rows, or ask for fewer paths\n"
+        "  at paths"
+    )
+    spec = read([{"constant": table}], paths=3)
+    with pytest.raises(SpecError, match="has values of 3 paths, and there are 4"):
+        spec.changed(paths=4)
+    (told,) = faults([{"constant": {"from_table": {"key": "series", "values": {"y": 1}}}}])
+    assert told == "the table of x.constant.level has no value for x; add a row, or take it out of there\n  at the spec"
