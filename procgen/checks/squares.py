@@ -21,7 +21,7 @@ from procgen.checks.verdict import Check
 
 LAGS = (1, 4)
 _ORDER = 4  # a square times a square
-_HIDDEN = 4.0  # times the skewness that is seen: products of squares hide most of theirs until they meet their tail
+HIDDEN = 4.0  # times the skewness that is seen: products of squares hide most of theirs until they meet their tail
 
 
 @dataclass
@@ -106,4 +106,4 @@ class SquareSums:
         if n < FEW_PATHS or sample.sd == 0.0:
             note = f"only {n} paths: reported, not judged"
             return Check(series, what, probe, kind, theory, theory + sample.mean, outcome="reported", note=note)
-        return Check.of(series, what, probe, kind, sample_mean(sample, theory, times=_HIDDEN))
+        return Check.of(series, what, probe, kind, sample_mean(sample, theory, times=HIDDEN))

@@ -18,6 +18,7 @@ from procgen.checks import judge, judge_shocks
 from procgen.checks.judge import Finding, Sample
 from procgen.checks.scores import BINS, Scores, cluster_scores
 from procgen.checks.shocks import CrossSums, ShockSums
+from procgen.checks.squares import HIDDEN
 from tests.studies.calibration import Case, Findings, far, of_one_number
 
 Rng = np.random.Generator
@@ -74,7 +75,9 @@ def garch(alpha: float, beta: float) -> Draw:
 # means over paths
 
 
-def sample_findings(y: NDArray, sd: float | None, hidden: float = 0.0) -> Iterator[tuple[Finding, int]]:
+def sample_findings(
+    y: NDArray, sd: float | None, hidden: float = 0.0, times: float = 1.0
+) -> Iterator[tuple[Finding, int]]:
     """Findings of the means of the rows of y, which have mean 0."""
     n = y.shape[1]
     square = y * y
@@ -89,7 +92,7 @@ def sample_findings(y: NDArray, sd: float | None, hidden: float = 0.0) -> Iterat
     for row in sums[far(sums[:, 0] / spread)].tolist():
         sample = Sample.from_powers(n, row)
         if sample.sd > 0:
-            yield judge.sample_mean(sample, 0.0, sd, hidden), 1
+            yield judge.sample_mean(sample, 0.0, sd, hidden, times), 1
 
 
 def mean_of(draw: Draw, n: int, known: bool) -> Findings:
@@ -107,6 +110,16 @@ def slope_of(draw: Draw, n: int, skew: float) -> Findings:
 
     def findings(rng: Rng, count: int) -> Iterator[tuple[Finding, int]]:
         return sample_findings(draw(rng, (count, n)) * draw(rng, (count, n)), None, skew**2)
+
+    return findings
+
+
+def squares_slope(draw: Draw, n: int, steps: int) -> Findings:
+    """The slope of squares on those one step earlier, averaged over steps, of numbers that are independent."""
+
+    def findings(rng: Rng, count: int) -> Iterator[tuple[Finding, int]]:
+        q = draw(rng, (steps, count, n)) ** 2 - 1
+        return sample_findings(np.einsum("tcn,tcn->cn", q[1:], q[:-1]) / (steps - 1), None, times=HIDDEN)
 
     return findings
 
@@ -364,6 +377,8 @@ CASES = (
     Case("slope between series, 100 of Laplace", 2_000_000, slope_of(laplace, 100, 0.0), 100),
     Case("slope between series, 100 exponentials", 2_000_000, slope_of(exponential, 100, 2.0), 100),
     Case("slope between series, 2,000 lognormals (σ 1)", 200_000, slope_of(lognormal(1.0), 2000, 6.18), 2000),
+    Case("slope of squares, 200 paths of 20 steps, Laplace", 100_000, squares_slope(laplace, 200, 20), 4000),
+    Case("slope of squares, 2,000 paths of 20 steps, Laplace", 10_000, squares_slope(laplace, 2000, 20), 40_000),
     Case("neighbouring paths, 100 normal averages", 2_000_000, paths_side_by_side(normal, 100), 100),
     Case("neighbouring paths, 100 exponentials", 2_000_000, paths_side_by_side(exponential, 100), 100),
     Case("neighbouring paths, 100 lognormals (σ 1)", 2_000_000, paths_side_by_side(lognormal(1.0), 100), 100),
