@@ -88,14 +88,14 @@ def _behind_spread(rows: Sequence[Check], kinds: Mapping[str, list[Check]]) -> s
     """What is behind shocks of another size in a series whose own variance is as stated.
 
     The shocks are what is left when memory, or the conditional variance, is taken away. Where too much or too little
-    is left of values that spread as they should, it is memory or clustering that is not as stated.
+    is left of values that spread as they should, it is memory or clustering that is not as stated, or their law.
     """
     shocks = [row for row in rows if row.what in _SIZES and row.outcome == "departs"]
     stated = {row.theory for row in rows if row.what == "variance"}
-    behind = max(("memory", "clustering"), key=lambda kind: _top(kinds, kind))
+    behind = max(("memory", "clustering", "law"), key=lambda kind: _top(kinds, kind))
     moved = _moved(rows, "variance over steps")
     in_values = not kinds["spread"][0].what.startswith("shocks: ")
-    if in_values or not shocks or moved is None or not _one_value(stated) or behind not in kinds:
+    if in_values or not shocks or moved is None or not _one_value(stated) or not _top(kinds, behind):
         return None
     return behind if abs(moved) < _LIKE * _log_variance(shocks[0]) else None
 
@@ -125,7 +125,8 @@ def _one_value(numbers: set[float | None]) -> bool:
 
 
 def _top(kinds: Mapping[str, list[Check]], kind: str) -> float:
-    return -(kinds[kind][0].log_p or 0.0) if kind in kinds else 0.0
+    """The largest −log p of a kind among the tests that answer to it alone."""
+    return max((-(row.log_p or 0.0) for row in kinds.get(kind, ()) if not row.what.startswith(_WHOLE_LAW)), default=0.0)
 
 
 def _log_variance(row: Check) -> float:
