@@ -50,7 +50,8 @@ def series_table(varied: Any) -> pa.Table | None:
     for p in drawn:
         rows[p.owner][p.varying.name or p.varying.label] = varied.constants[p.name]
     columns = dict.fromkeys(column for row in rows.values() for column in row)
-    table: dict[str, list[Any]] = {"series": [*rows], **{column: [row.get(column) for row in rows.values()] for column in columns}}
+    table: dict[str, list[Any]] = {"series": [*rows]}
+    table |= {column: [row.get(column) for row in rows.values()] for column in columns}
     return pa.table({column: _alike(values) for column, values in table.items()})
 
 
