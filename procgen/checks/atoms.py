@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from typing import Any
 
 # Kinds that can hold a value where it is, or switch off what moves it.
@@ -15,4 +16,12 @@ def may_stay(theory: Any, graph: Any, name: str) -> bool:
     kinds = {node.term.kind for node in graph.order([graph.series[name]]) if getattr(node, "term", None)}
     if not kinds & _HOLDING:
         return False
-    return all(source.kind == PROCESS for source in theory.expression.linear.sources)
+    sources = theory.expression.linear.sources
+    bent = {inner.key for source in theory.expression.sources if source.kind == PROCESS for inner in _inside(source)}
+    return all(source.kind == PROCESS or source.key in bent for source in sources)
+
+
+def _inside(process: Any) -> Iterator[Any]:
+    """The sources that a process is made of."""
+    for ingredient in process.detail.ingredients:
+        yield from getattr(ingredient, "sources", ())
