@@ -123,21 +123,25 @@ def title(verdict: str, found: Sequence[Coverage]) -> str:
         names = _some([each.series for each in blind])
         return f"CANNOT BE JUDGED: nothing about the spread of {names} could be judged{agreed}"
     lacking: dict[tuple[str, ...], list[str]] = {}
-    for each in found:
+    for each in sorted(found, key=lambda each: not each.blind):  # what may have any spread is named, however many
         if each.missing:
             lacking.setdefault(tuple(each.missing), []).append(each.series)
     if not lacking:
         return "AGREES: nothing departs from what the spec states"
-    parts = [f"{_and(sides)} of {_some(series)}" for sides, series in lacking.items()]
+    unseen = {each.series for each in found if each.blind}
+    named = [sum(name in unseen for name in series) for series in lacking.values()]
+    groups = zip(lacking.items(), named, strict=True)
+    parts = [f"{_and(sides)} of {_some(series, most=many)}" for (sides, series), many in groups]
     moving = [each for each in found if not each.still and " ~ " not in each.series]
     common = [side for side in SIDES if all(side in each.judged for each in moving)]
-    return f"AGREES on {_and(common) or 'a part'} only: {_some(parts, '; ')} could not be judged"
+    return f"AGREES on {_and(common) or 'a part'} only: {_some(parts, '; ', sum(map(bool, named)))} could not be judged"
 
 
 def _and(words: Sequence[str]) -> str:
     return " and ".join(filter(None, [", ".join(words[:-1]), *words[-1:]]))
 
 
-def _some(words: Sequence[str], between: str = ", ") -> str:
-    more = f" and {len(words) - _MOST} more" if len(words) > _MOST else ""
-    return between.join(words[:_MOST]) + more
+def _some(words: Sequence[str], between: str = ", ", most: int = 0) -> str:
+    most = max(most, _MOST)
+    more = f" and {len(words) - most} more" if len(words) > most else ""
+    return between.join(words[:most]) + more

@@ -21,6 +21,7 @@ from procgen.checks.verdict import Check
 
 LAGS = (1, 4)
 _ORDER = 4  # a square times a square
+_FEW = 5 * FEW_PATHS  # skewed sums of 200 paths by 100 steps were seen to hide all of their skewness
 HIDDEN = 4.0  # times the skewness that is seen: products of squares hide most of theirs until they meet their tail
 
 
@@ -103,7 +104,7 @@ class SquareSums:
         if not self.plan.highest > 3 * _ORDER:
             note = f"moments exist only below order {self.plan.highest:g}: no central limit theorem reaches far enough"
             return Check(series, what, probe, kind, theory, theory + sample.mean, outcome="untestable", note=note)
-        if n < FEW_PATHS or sample.sd == 0.0:
+        if n < _FEW or sample.sd == 0.0:
             note = f"only {n} paths: reported, not judged"
             return Check(series, what, probe, kind, theory, theory + sample.mean, outcome="reported", note=note)
         return Check.of(series, what, probe, kind, sample_mean(sample, theory, times=HIDDEN))
