@@ -91,7 +91,7 @@ class Parameter:
     def read(self, tree: Tree, reader: Reading) -> Any:
         """Return the value at `tree` per step, or INVALID after reporting."""
         reader = reader.about(self)
-        if varies(tree) and not isinstance(self.domain, Real | Reals):
+        if varies(tree) and not (self.domain.structured or isinstance(self.domain, Real | Reals)):
             reader.fault(tree, f"{self.name} cannot vary, only numbers can; write {self.domain.describe()}")
             return INVALID
         if tree.is_map and "per" in tree.value and not self.domain.structured:

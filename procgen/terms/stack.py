@@ -25,6 +25,10 @@ def stacked(parts: Sequence[Any]) -> Any:
     first = parts[0]
     if all(part is first for part in parts) or (isinstance(first, int | str | None) and all(p == first for p in parts)):
         return first
+    if isinstance(first, np.ndarray):
+        if all(np.array_equal(part, first) for part in parts):
+            return first
+        raise Unlike
     if all(isinstance(part, float) for part in parts):
         return first if all(part == first for part in parts) else np.array(parts)
     if isinstance(first, tuple) and len({len(part) for part in parts}) == 1:
