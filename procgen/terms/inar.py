@@ -109,9 +109,9 @@ class Inar(Term):
 
     def _staying(self, x, u):
         """How many of x stay; the table grows with the counts that come, which changes no entry."""
-        most = 32
+        most = 31
         while most < x.max():
-            most = 2 * most
+            most = 2 * most + 1  # up to 2047, for which a table has room
         return thinning(self.alpha, most).counts(x, u)
 
     def unranked(self):
