@@ -27,7 +27,7 @@ def parameter_checks(ensemble: Any, spec: Any) -> Iterator[Check]:
         law = parameter.varying.law
         if name in drawn and not isinstance(law, TableDraw):
             yield from _law_checks(f"parameter {name}", drawn[name].to_numpy(), law)
-    if getattr(ensemble, "manifest", None) is not None:
+    if len(drawn.columns) and getattr(ensemble, "manifest", None) is not None:
         yield _table(ensemble, drawn)
 
 

@@ -172,7 +172,7 @@ def _law(facts: dict[str, Any]) -> list[str]:
 
 def _without_dust(values: np.ndarray, least: float = DUST) -> list[float]:
     """Numbers with what is left of cancelled digits shown as 0."""
-    size = np.abs(values).max(initial=0.0)
+    size = abs(values[0]) if len(values) and values[0] else np.abs(values).max(initial=0.0)  # lag 0 is the scale
     return np.where(np.abs(values) < least * size, 0.0, values).tolist()
 
 

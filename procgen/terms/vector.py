@@ -218,8 +218,11 @@ class VectorErrorCorrection(VectorArma):
     def check(cls, values):
         k, r = len(values["names"]), len(values["relations"])
         faults = [*shape_faults(values, k, square=("phi",))]
-        if not 1 <= r < k or any(len(row) != k for row in values["relations"]):
-            faults.append(("relations", f"expected 1 to {k - 1} rows of {k} weights (one a component), got {r}"))
+        if any(len(row) != k for row in values["relations"]):
+            faults.append(("relations", f"expected rows of {k} weights, one a component"))
+        if r >= k:
+            why = f"with {r} of them nothing wanders; use vector_arma"
+            faults.append(("relations", f"expected fewer relations than the {k} components: {why}"))
         if len(values["adjustment"]) != k or any(len(row) != r for row in values["adjustment"]):
             faults.append(("adjustment", f"expected {k} rows of {r} (a row a component, a column a relation)"))
         if len(values["start"]) not in (1, k):

@@ -169,6 +169,11 @@ def test_an_appended_component_moves_nobody():
             "expected as many unit roots as components less relations (1), all else inside the unit circle, got 1 and "
             "a root of size 1.3; adjust against a relation",
         ),
+        (
+            "{vector_error_correction: {names: [a, b], relations: [[1, 0], [0, 1]], adjustment: [[-0.2, 0], [0, -0.1]], "
+            "sd: 1}}",
+            "expected fewer relations than the 2 components: with 2 of them nothing wanders; use vector_arma",
+        ),
     ],
 )
 def test_refusals_say_what_was_expected(body, message):

@@ -197,12 +197,14 @@ class _Look:
         law, name = self.law_or_normal()
         if law is None:
             return None, ""
-        return np.diff(law.cdf(_around(x))) / np.diff(_around(x)), name
+        with np.errstate(invalid="ignore"):  # cells too narrow for the digits of their place
+            return np.diff(law.cdf(_around(x))) / np.diff(_around(x)), name
 
     def cells(self, edges: NDArray) -> NDArray:
         """The stated mean density in each cell."""
         law, _ = self.law_or_normal()
-        return np.diff(np.asarray(law.cdf(edges), float)) / np.diff(edges)
+        with np.errstate(invalid="ignore"):
+            return np.diff(np.asarray(law.cdf(edges), float)) / np.diff(edges)
 
     def caption(self, name: str) -> str:
         known = self.values[np.isfinite(self.values)]
