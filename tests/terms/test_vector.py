@@ -170,7 +170,7 @@ def test_an_appended_component_moves_nobody():
             "a root of size 1.3; adjust against a relation",
         ),
         (
-            "{vector_error_correction: {names: [a, b], relations: [[1, 0], [0, 1]], adjustment: [[-0.2, 0], [0, -0.1]], "
+            "{vector_error_correction: {names: [a, b], relations: [[1, 0], [0, 1]], adjustment: [[-1, 0], [0, -1]], "
             "sd: 1}}",
             "expected fewer relations than the 2 components: with 2 of them nothing wanders; use vector_arma",
         ),
