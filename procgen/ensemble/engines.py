@@ -183,7 +183,7 @@ class Helper(threading.Thread):
                 self._send(task)
                 self.crew.keep(self._receive())
         except Stopped:
-            pass
+            self.process.wait()  # `end` ends it: were its input closed first, it would take us for dead and leave a mess
         except BaseException as error:
             self.crew.fail(error)
         finally:
