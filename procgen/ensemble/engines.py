@@ -183,7 +183,7 @@ class Helper(threading.Thread):
                 self._send(task)
                 self.crew.keep(self._receive())
         except Stopped:
-            self.process.wait()  # `end` ends it: were its input closed first, it would take us for dead and leave a mess
+            self.process.wait()  # `end` ends it: with its input closed, it would think us dead and clean up nothing
         except BaseException as error:
             self.crew.fail(error)
         finally:
