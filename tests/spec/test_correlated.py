@@ -124,8 +124,8 @@ def test_blocks_have_a_correlation_inside_and_one_across():
     assert found.matrix == ((1, 0.6, 0.1, 0.1), (0.6, 1, 0.1, 0.1), (0.1, 0.1, 1, 0.2), (0.1, 0.1, 0.2, 1))
 
 
-# Higham (2002), IMA J. Numer. Anal. 22, sec. 4: the nearest correlation to [[1, 1, 0], [1, 1, 1], [0, 1, 1]] has
-# 0.7607 beside the diagonal and 0.1573 in the corner.
+# Higham (2002), IMA J. Numer. Anal. 22, sec. 4 (from memory): the nearest correlation to [[1, 1, 0], [1, 1, 1],
+# [0, 1, 1]] has 0.7607 beside the diagonal and 0.1573 in the corner.
 HIGHAM = "{names: [a.white_noise, b.swing, c.noise], matrix: [[1, 1, 0], [1, 1, 1], [0, 1, 1]]"
 
 

@@ -44,7 +44,7 @@ def test_fractional_differences_have_the_published_moments(d, variance, correlat
     np.testing.assert_allclose(found, list(correlations.values()), rtol=0, atol=1e-10)
 
 
-# Hosking (1981), lemma 1, and 8.6: gamma(0) (1 + theta^2 + 2 theta rho(1)); values computed from the formulas.
+# Hosking (1981), lemma 1, and gamma(0) (1 + theta^2 + 2 theta rho(1)); formulas from memory, values computed from them.
 @pytest.mark.parametrize(
     ("body", "variance", "correlations"),
     [
@@ -58,7 +58,7 @@ def test_with_an_arma_part_too(body, variance, correlations):
     np.testing.assert_allclose(x.autocorrelation(list(correlations)), list(correlations.values()), atol=1e-10)
 
 
-# Mandelbrot & Van Ness (1968); Beran (1994), ch. 2: the autocorrelations at lags 1, 2, 3.
+# Mandelbrot & Van Ness (1968); Beran (1994), ch. 2: the autocorrelations at lags 1, 2, 3 (formula from memory).
 @pytest.mark.parametrize(
     ("hurst", "correlations"),
     [

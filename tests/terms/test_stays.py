@@ -43,7 +43,7 @@ def test_chances_are_those_of_the_renewal_equation():
 
 
 def test_shares_are_the_mean_stays():
-    """A state's share is its mean stay over that of a cycle (Ross 1996, Stochastic Processes, theorem 4.8.3)."""
+    """A state's share is its mean stay over that of a cycle (Ross 1996, ch. 4, from memory)."""
     graph = graph_of(f"  x: {RESTING}", steps=STEPS)
     known = theory(graph.spec, graph)["x"]
     np.testing.assert_allclose(known.mean([0, 50]), 0.4, rtol=1e-13)

@@ -60,7 +60,7 @@ def gamma(known, names, lag):
 
 
 def test_published_covariances():
-    """Lütkepohl (2005), sec. 2.1.4, to the three decimals that are printed there."""
+    """Lütkepohl (2005), sec. 2.1.4, to the three decimals that are printed there (from memory, and computed again)."""
     _, known, names = system(CORRELATED)
     printed = [[3.000, 0.161, 0.019], [0.161, 1.172, 0.674], [0.019, 0.674, 0.954]]
     np.testing.assert_allclose(gamma(known, names, 0), printed, rtol=0, atol=6e-4)

@@ -12,8 +12,6 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-ROLES = ("stated", "seen", "path", "chance", "compare")
-
 
 @dataclass(frozen=True)
 class Axis:
