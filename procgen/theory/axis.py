@@ -14,6 +14,7 @@ from procgen.theory.chains import States, Switching
 from procgen.theory.expression import Expression, opaque, product
 from procgen.theory.fractional import Filtered, FractionalNoise, GaussianNoise, StationaryGaussian
 from procgen.theory.known import Known
+from procgen.theory.lattice import Rounded
 from procgen.theory.laws import is_gaussian
 from procgen.theory.linear import At, Base, Linear
 from procgen.theory.processes import Chain, Curved, Held, Hinged, Process, mean_at
@@ -190,6 +191,12 @@ class Axis(Volatile, Stating):
     def curved(self, x: Expression, f: Callable[[np.ndarray], np.ndarray]) -> Expression:
         """f(x) for a smooth f of slow growth: by its Hermite series where x is Gaussian."""
         return self._of_gaussian(x, f, Curved(self.name, x, f))
+
+    def rounded(
+        self, x: Expression, f: Callable[[np.ndarray], np.ndarray], to: float, shift: float = 0.0
+    ) -> Expression:
+        """f(x), which is x + `shift` multiples of `to`, rounded to multiples of it: closed where x is Gaussian."""
+        return self._of_gaussian(x, f, Rounded(self.name, x + self.level(shift * to), to))
 
     def _of_gaussian(self, x: Expression, f: Callable[[np.ndarray], np.ndarray], process: Any) -> Expression:
         if not x.sources:

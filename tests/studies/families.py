@@ -165,6 +165,13 @@ FAMILIES: Mapping[str, Any] = {
             "e": [{"min": {"of": _AR, "and": [{"constant": 0.8}]}}],
         }
     },
+    "multiples": {
+        "series": {
+            "a": [{"round": {"of": [{"ar": {"phi": 0.6, "total_sd": 2}}], "to": 0.5}}],
+            "b": [{"floor": {"of": [{"ar": {"phi": 0.8, "total_sd": 2}}, {"constant": 20}], "to": 4}}],
+            "c": [{"ceiling": {"of": [{"white_noise": {"sd": 3}}, {"constant": 0.7}], "to": 5}}],
+        }
+    },
     "curved": {
         "series": {
             "a": [{"power": {"of": [*_AR, {"constant": 2}], "exponent": 2}}],
