@@ -40,6 +40,10 @@ def common(
 
 
 SpecFile = Annotated[Path, typer.Argument(metavar="SPEC", help="The spec, a YAML file.", show_default=False)]
+Scheduler = Annotated[
+    str | None,
+    typer.Option(metavar="local|ADDRESS", help="Work on a Dask cluster: the one there, or one started here."),
+]
 Json = Annotated[bool, typer.Option("--json", help="Print JSON instead of text.")]
 
 
@@ -106,14 +110,12 @@ def render(
         bool, typer.Option("--resume", help="Go on with a render that was stopped, or mend one.")
     ] = False,
     overwrite: Annotated[bool, typer.Option("--overwrite", help="Remove the ensemble that is in OUT first.")] = False,
-    scheduler: Annotated[str, typer.Option(metavar="local", help="Who draws: this machine.")] = "local",
+    scheduler: Scheduler = None,
 ) -> None:
     """Draw paths of SPEC into the folder OUT: Parquet parts and manifest.json."""
     import procgen as pg
     from procgen.report.rendered import rendered
 
-    if scheduler != "local":
-        raise typer.BadParameter(f"expected local, got {scheduler!r}", param_hint="--scheduler")
     loaded = pg.load(spec)
     with progress("drawing") as tick:
         pg.render(
@@ -128,6 +130,7 @@ def render(
             reveal=reveal,
             resume=resume,
             overwrite=overwrite,
+            scheduler=scheduler,
             progress=tick,
         )
     printed(rendered(pg.open_ensemble(out)))
@@ -159,6 +162,7 @@ def validate(
     workers: Annotated[
         int | None, typer.Option(metavar="N", help="Processes; what the size repays when absent.", min=1)
     ] = None,
+    scheduler: Scheduler = None,
     json: Json = False,
     report: Annotated[Path | None, typer.Option(metavar="FILE.html", help="Also write an HTML report.")] = None,
 ) -> None:
@@ -176,7 +180,7 @@ def validate(
     columns = {role: name for role, name in roles.items() if name is not None} | dict(map(column_of, series_col or ()))
     stated = None if spec is None else pg.load(spec)
     with progress("reading") as tick:
-        verdict = pg.validate(data, stated, false_alarm, columns or None, tick, workers)
+        verdict = pg.validate(data, stated, false_alarm, columns or None, tick, workers, scheduler)
     written = None if report is None else f"report: {verdict.to_html(report)}"
     printed(verdict_json(verdict) if json else verdict.to_text())
     if written:

@@ -67,7 +67,7 @@ def test_help_names_every_command_and_shows_an_example_of_each():
 def test_the_options_are_those_that_were_promised():
     promised = {
         "render": "-o --paths --first-path --steps --seed --workers --layout --reveal --resume --overwrite --scheduler",
-        "validate": "--spec --path-col --step-col --time-col --series-col --false-alarm --json --report",
+        "validate": "--spec --path-col --step-col --time-col --series-col --false-alarm --json --report --scheduler",
         "theory": "--json --at --lags --frequencies --horizon",
         "digest": "--expect --redraw",
     }
@@ -317,7 +317,6 @@ def test_more_than_the_disk_holds_is_refused_with_the_figure(tmp_path, monkeypat
         ["render", PUMP, "-o", "x", "--paths", "many"],
         ["render", PUMP, "-o", "x", "--workers", "-1"],
         ["render", PUMP, "-o", "x", "--layout", "cube"],
-        ["render", PUMP, "-o", "x", "--scheduler", "tcp://elsewhere:8786"],
         ["render", PUMP, "-o", "x", "--resume", "--overwrite"],
         ["render", PUMP, "-o", "x", "--reveal", "flow.nothing"],
         ["theory", PUMP, "--at", "one,two"],

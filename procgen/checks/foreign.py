@@ -148,10 +148,12 @@ class Table:
             "where": self.where,
         }
 
-    def gathered(self, workers: int | None, progress: Progress | None) -> Gather:
+    def gathered(self, workers: int | None, progress: Progress | None, scheduler: str | None = None) -> Gather:
         """The sums of one pass, by this process: the table is in its memory."""
+        from procgen.checks.source import no_cluster
         from procgen.checks.validate import plan_of
 
+        no_cluster(scheduler)
         plan = plan_of(self.spec, self.steps, self.same_draws)
         return in_one_process(plan, self.blocks(), Block(0, self.paths, 0, self.steps), progress)
 

@@ -14,8 +14,8 @@ from procgen.checks.parts import WORK, is_whole, plan_for, tasks, unpacked
 from procgen.checks.rectangles import grouped, named
 from procgen.checks.tree import Tree
 from procgen.checks.verdict import Check
-from procgen.ensemble import engines
-from procgen.ensemble.engines import Progress
+from procgen.ensemble.cluster import opened
+from procgen.ensemble.engines import Progress, default_workers
 
 WORTH = 16_000_000  # values that repay one more process: it derives the theory for itself
 
@@ -30,7 +30,7 @@ class Origin(Protocol):
     columns: dict[str, str]  # series of `spec` -> the name that the reader knows
     same_draws: bool  # whether drawn parameters of a path are those that `spec` draws for it
 
-    def gathered(self, workers: int | None, progress: Progress | None) -> Gather: ...
+    def gathered(self, workers: int | None, progress: Progress | None, scheduler: str | None = None) -> Gather: ...
     def checks(self) -> list[Check]: ...
     def about(self) -> dict[str, Any]: ...
 
@@ -71,6 +71,12 @@ def origin(data: Any, spec: Any, columns: Mapping[str, str] | None) -> Origin:
     raise TypeError(f"expected an ensemble, a DataFrame, or the path of one, got {type(data).__name__}")
 
 
+def no_cluster(scheduler: str | None) -> None:
+    """TableError when a cluster is asked to read what only this process holds."""
+    if scheduler is not None:
+        raise TableError("a cluster reads the parts of an ensemble in a folder; leave scheduler= (--scheduler) out")
+
+
 def _need_spec(spec: Any, what: object) -> None:
     if spec is None:
         raise TableError(f"{what} does not say what it should follow; give the spec (--spec SPEC, or spec=)")
@@ -107,16 +113,17 @@ class EnsembleOrigin:
             "spec_digest": self.spec.digest(),
         }
 
-    def gathered(self, workers: int | None, progress: Progress | None) -> Gather:
+    def gathered(self, workers: int | None, progress: Progress | None, scheduler: str | None = None) -> Gather:
         """The sums of one pass: of the parts on disk by several processes, of an ensemble in memory by this one."""
         if getattr(self.ensemble, "manifest", None) is not None:
-            return self._from_parts(workers, progress)
+            return self._from_parts(workers, progress, scheduler)
+        no_cluster(scheduler)
         from procgen.checks.validate import plan_of
 
         blocks = grouped(named(self.ensemble.blocks(), self.columns), self.ensemble.whole)
         return in_one_process(plan_of(self.spec, self.steps, self.same_draws), blocks, self.ensemble.whole, progress)
 
-    def _from_parts(self, workers: int | None, progress: Progress | None) -> Gather:
+    def _from_parts(self, workers: int | None, progress: Progress | None, scheduler: str | None) -> Gather:
         todo = tasks(self.ensemble, self.spec, self.columns, self.same_draws)
         tree: Tree[Gather] = Tree()
         nodes: dict[int, dict[str, str]] = {}
@@ -129,9 +136,11 @@ class EnsembleOrigin:
                 for first, end, facts, arrays in record["sums"]:
                     tree.add(first, end, unpacked(plan, facts, arrays))
 
-        if workers is None:
-            workers = engines.default_workers(self.rows * len(self.columns), WORTH)
-        engines.run(todo, WORK, keep, workers, progress, 0, self.rows, advice="use fewer --workers")
+        if workers is None and scheduler is None:
+            workers = default_workers(self.rows * len(self.columns), WORTH)
+        with opened(scheduler, workers) as engine:
+            engine.check_sees(str(self.ensemble.path.absolute()))
+            engine.run(todo, WORK, keep, progress, 0, self.rows)
         self.faults.sort(key=lambda check: check.probe)
         self._compare_digests(nodes)
         return tree.total(Gather(plan_for(todo[0])))

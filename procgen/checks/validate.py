@@ -36,6 +36,7 @@ def validate(
     columns: Mapping[str, str] | None = None,
     progress: Tick | None = None,
     workers: int | None = None,
+    scheduler: str | None = None,
 ) -> Verdict:
     """A verdict on whether `data` behaves as the spec states.
 
@@ -54,6 +55,9 @@ def validate(
     workers : int, optional
         Processes that read an ensemble's parts; None is what the size repays, up to the processors there are. The
         verdict is the same for any number. A table, or an ensemble in memory, is read by this process.
+    scheduler : str, optional
+        Address of a Dask scheduler whose workers read an ensemble's parts (extra `cluster`), or "local" to start
+        `workers` of them on this machine.
 
     Raises
     ------
@@ -68,7 +72,7 @@ def validate(
     if workers is not None and (isinstance(workers, bool) or not isinstance(workers, int) or workers < 1):
         raise ValueError(f"expected workers to be a whole number of at least 1, got {workers!r}")
     origin = source.origin(data, spec, columns)
-    gather = origin.gathered(workers, progress)
+    gather = origin.gathered(workers, progress, scheduler)
     rows = [*origin.checks(), *origin.faults, *judged(gather)]
     absent = getattr(origin, "absent", 0)
     if absent:  # rows that are missing are named once, not again as values that are not finite

@@ -19,8 +19,9 @@ import sys
 import threading
 from collections import deque
 from collections.abc import Callable, Iterator, Mapping, Sequence
+from dataclasses import dataclass
 from types import FrameType
-from typing import Any
+from typing import Any, Protocol
 
 from procgen.ensemble.errors import EnsembleError, system_sentence
 
@@ -112,6 +113,51 @@ class Crew:
         finally:
             if ours:
                 signal.signal(signal.SIGINT, signal.default_int_handler)
+
+
+class Engine(Protocol):
+    """Who works on tasks: `Here`, or a `Cluster`."""
+
+    @property
+    def size(self) -> int:
+        """Tasks that are worked on at once."""
+
+    def check_sees(self, folder: str) -> None:
+        """Raise EnsembleError when a worker does not see the folder."""
+
+    def run(
+        self,
+        tasks: Sequence[Mapping[str, Any]],
+        work: str,
+        keep: Callable[[Records], None],
+        progress: Progress | None = None,
+        done: int = 0,
+        rows: int = 0,
+    ) -> None:
+        """Do `work` on all tasks; `keep` takes the records of each, as they come, one call at a time."""
+
+
+@dataclass(frozen=True)
+class Here:
+    """This process, and worker processes beside it; arguments as for `run`."""
+
+    size: int
+    inherit: int | None = None
+    advice: str = "use fewer --workers"
+
+    def check_sees(self, folder: str) -> None:
+        """Nothing to check: it is one machine."""
+
+    def run(
+        self,
+        tasks: Sequence[Mapping[str, Any]],
+        work: str,
+        keep: Callable[[Records], None],
+        progress: Progress | None = None,
+        done: int = 0,
+        rows: int = 0,
+    ) -> None:
+        run(tasks, work, keep, self.size, progress, done, rows, self.inherit, self.advice)
 
 
 def run(

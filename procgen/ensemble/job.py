@@ -10,9 +10,10 @@ from typing import Any
 
 from procgen.chance.streams import STREAM_VERSION
 from procgen.ensemble import engines, manifest, revealed
+from procgen.ensemble.cluster import opened
 from procgen.ensemble.columns import TYPES, store
 from procgen.ensemble.draw import Drawer, empty
-from procgen.ensemble.engines import Progress
+from procgen.ensemble.engines import Engine, Progress
 from procgen.ensemble.ensemble import Ensemble, Memory, OnDisk
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.manifest import Manifest, bytes_text
@@ -40,6 +41,7 @@ def render(
     resume: bool = False,
     overwrite: bool = False,
     layout: str = "long",
+    scheduler: str | None = None,
     progress: Progress | None = None,
     factory: str = FACTORY,
 ) -> Ensemble:
@@ -57,6 +59,8 @@ def render(
         their digests and draw missing and damaged parts again.
     overwrite : remove the ensemble that is in `out` first.
     layout : "long": path, step, time (where the spec has a start), one column a series.
+    scheduler : address of a Dask scheduler whose workers draw (extra `cluster`), or "local" to start `workers` of them
+        on this machine; None: this process, and worker processes beside it.
     progress : called with (rows drawn, rows in all), often.
 
     Raises EnsembleError: `out` holds another ensemble or is in use, too little space, a value that is not
@@ -69,6 +73,8 @@ def render(
     if out is None and (resume or overwrite):
         word = "resume" if resume else "overwrite"
         raise EnsembleError(f"{word} is about a folder, and there is none; give out=, or leave {word} away")
+    if out is None and scheduler is not None:
+        raise EnsembleError("a cluster writes files; give out=, or leave scheduler away to draw in memory")
     if out is not None:
         folder = folder_path(out, "out")
     if workers is not None:
@@ -85,8 +91,9 @@ def render(
     if out is None:
         return _in_memory(source, whole, progress)
     job = Job(spec, source, whole, Folder(folder), names, layout, factory)
-    workers = engines.default_workers(whole.rows * len(source.columns)) if workers is None else workers
-    return job.run(workers, resume, overwrite, progress)
+    if workers is None and scheduler is None:
+        workers = engines.default_workers(whole.rows * len(source.columns))
+    return job.run(workers, scheduler, resume, overwrite, progress)
 
 
 def _whole(name: str, value: int, least: int) -> int:
@@ -167,7 +174,9 @@ class Job:
         }
         self.present = Present(self.folder, self.whole, self.identity, self.factory)
 
-    def run(self, workers: int, resume: bool, overwrite: bool, progress: Progress | None) -> OnDisk:
+    def run(
+        self, workers: int | None, scheduler: str | None, resume: bool, overwrite: bool, progress: Progress | None
+    ) -> OnDisk:
         """Draw what is missing; nothing when all is there."""
         if not overwrite and (found := self._complete(resume, progress)) is not None:
             self.folder.tidy()
@@ -175,7 +184,9 @@ class Job:
         with self.folder.locked() as descriptor:
             # another render may have finished while this one waited for the lock
             if overwrite or (found := self._complete(resume, progress)) is None:
-                found = self._draw(workers, resume, overwrite, progress, descriptor)
+                advice = "use fewer --workers, then go on with --resume"
+                with opened(scheduler, workers, descriptor, advice) as engine:
+                    found = self._draw(engine, resume, overwrite, progress)
         return OnDisk(self.folder.path, found, self.spec)
 
     def _complete(self, resume: bool, progress: Progress | None) -> Manifest | None:
@@ -183,13 +194,12 @@ class Job:
         found = self.present.complete(resume, progress)
         return found if self.factory != FACTORY or revealed.there(self.folder, self.spec) else None
 
-    def _draw(
-        self, workers: int, resume: bool, overwrite: bool, progress: Progress | None, descriptor: int | None
-    ) -> Manifest:
+    def _draw(self, engine: Engine, resume: bool, overwrite: bool, progress: Progress | None) -> Manifest:
         self._refuse_too_large()
+        engine.check_sees(str(self.folder.state.absolute()))
         if overwrite:
             self.present.remove()
-        plan = self.present.chains(resume) or chains(self.whole, row_bytes(self.columns), workers)
+        plan = self.present.chains(resume) or chains(self.whole, row_bytes(self.columns), engine.size)
         there = self.present.records(plan)
         self.folder.clean_state(keep_plan=True)
         self.present.write_plan(plan)
@@ -202,17 +212,7 @@ class Job:
             if start < len(chain):
                 tasks.append(self._task(chain, start))
         done = sum(Block(**record["part"]).rows for record in records)
-        engines.run(
-            [task.json() for task in tasks],
-            WORK,
-            records.extend,
-            workers,
-            progress,
-            done,
-            self.whole.rows,
-            descriptor,
-            "use fewer --workers, then go on with --resume",
-        )
+        engine.run([task.json() for task in tasks], WORK, records.extend, progress, done, self.whole.rows)
         if self.factory == FACTORY:
             revealed.write(self.folder, self.spec, self.whole, self.identity)
         made = self._make_manifest(records)

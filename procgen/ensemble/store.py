@@ -10,6 +10,7 @@ import contextlib
 import json
 import os
 import re
+import secrets
 import time
 from collections.abc import Iterator, Mapping
 from pathlib import Path
@@ -45,7 +46,8 @@ class Folder:
     @contextlib.contextmanager
     def writing(self, name: str) -> Iterator[Path]:
         """A temporary path that becomes OUT/name when the block ends well, and nothing otherwise."""
-        temporary = self.state / f"{Path(name).name}.{os.getpid()}.tmp"
+        # a token, since processes of several machines may have one number, and one part be drawn twice at once
+        temporary = self.state / f"{Path(name).name}.{os.getpid()}-{secrets.token_hex(4)}.tmp"
         try:
             yield temporary
             os.replace(temporary, self.path / name)
