@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-HALVINGS = 200
+from procgen.chance.laws.mixture import halved
 
 
 class MixedLaw:
@@ -43,14 +43,7 @@ class MixedLaw:
     def ppf(self, p: Any) -> NDArray:
         """Quantiles, by halving between those of the parts."""
         p = np.asarray(p, float)
-        low, high = self._ends(p)
-        for _ in range(HALVINGS):
-            middle = 0.5 * (low + high)
-            if np.all((middle == low) | (middle == high)):
-                break
-            upper = np.where(p < 0.5, self.cdf(middle) < p, self.sf(middle) > 1.0 - p)
-            low, high = np.where(upper, middle, low), np.where(upper, high, middle)
-        return 0.5 * (low + high)
+        return halved(lambda x: np.where(p < 0.5, self.cdf(x) < p, self.sf(x) > 1.0 - p), *self._ends(p))
 
     def _ends(self, p: NDArray) -> tuple[NDArray, NDArray]:
         parts = np.array([law.ppf(p) for law in self.laws])

@@ -11,7 +11,18 @@ from arch.univariate import SkewStudent
 from scipy import integrate, special, stats
 
 from procgen.chance.gamma import half_step, log_gamma
-from procgen.chance.laws import GED, Gamma, Laplace, Lognormal, Normal, NormalMixture, SkewedT, SkewNormal, StudentT
+from procgen.chance.laws import (
+    GED,
+    Gamma,
+    Laplace,
+    Lognormal,
+    Mixture,
+    Normal,
+    NormalMixture,
+    SkewedT,
+    SkewNormal,
+    StudentT,
+)
 from procgen.chance.portable import normal_quantile
 from procgen.spec.reader import SpecError
 from tests.terms.helpers import graph_of
@@ -152,6 +163,26 @@ def test_shocks_from_normals_have_the_ranks_of_the_normals(law):
     lower, upper = areas(law)
     off = np.abs(np.where(z < 0, lower(x), upper(x)) / area - 1)
     assert (off <= 1e-9 + np.where(z < 0, near_an_end(law, x), 0.0)).all()
+
+
+@pytest.mark.parametrize("alpha", [0.05, 0.3, 1, 4, 50, -4, -50])
+def test_areas_of_a_skew_normal_law_against_quadrature(alpha):
+    """Both tails to 1e-10 of themselves, down to 1e-250, against the density added up outwards."""
+    law = SkewNormal(alpha=alpha)
+    (lower, upper), z, mine = azzalinis(law), np.linspace(-12.0, 2.0, 561), law.distribution()
+    for ours, theirs in ((mine.cdf(z), lower(z)), (mine.sf(-z), upper(-z))):
+        told = theirs > 1e-250
+        assert np.abs(ours[told] / theirs[told] - 1).max() <= 1e-10
+
+
+@pytest.mark.parametrize("law", [SEVERAL, Mixture(weight=0.1, ratio=4, shift=-1)], ids=str)
+def test_quantiles_of_mixtures_invert_their_areas(law):
+    p = np.concatenate([10.0 ** np.arange(-300, 0, 7), np.linspace(0.01, 0.5, 50)])
+    mine = law.distribution()
+    assert mine.cdf(mine.ppf(p)) == pytest.approx(p, rel=1e-11)
+    assert mine.sf(mine.isf(p)) == pytest.approx(p, rel=1e-11)
+    assert mine.cdf(mine.ppf(1 - p)) == pytest.approx(1 - p, rel=1e-14)
+    assert list(mine.ppf([0.0, 1.0])) == [-np.inf, np.inf]
 
 
 @pytest.mark.parametrize("law", EXAMPLES, ids=str)

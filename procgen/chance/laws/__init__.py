@@ -9,7 +9,8 @@ from procgen.chance.laws.ged import GED
 from procgen.chance.laws.mixture import Mixture
 from procgen.chance.laws.positive import Gamma, Lognormal
 from procgen.chance.laws.simple import Laplace, Logistic, Normal, Uniform
-from procgen.chance.laws.skewed import SkewedT, SkewNormal
+from procgen.chance.laws.skew_normal import SkewNormal
+from procgen.chance.laws.skewed import SkewedT
 from procgen.chance.laws.student import StudentT
 
 __all__ = [

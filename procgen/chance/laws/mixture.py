@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from dataclasses import dataclass
 from functools import lru_cache
 from typing import Any, ClassVar
@@ -18,6 +19,7 @@ from procgen.spec.declare import Parameter, Real
 
 _FURTHEST = 13.0  # standard deviations: the normal area beyond is 6e-39
 _MARKS = (-12, -8, -6, -4, -2, 0, 2, 4, 6, 8, 12)
+_HALVINGS = 200
 
 
 @dataclass(frozen=True)
@@ -109,7 +111,7 @@ class Normals:
 
     def distribution(self) -> Any:
         """Their mixture as a frozen SciPy distribution."""
-        from scipy.special import ndtr
+        from scipy.special import ndtr, ndtri
         from scipy.stats import norm, rv_continuous
 
         parts, moment = self.parts, self.moment
@@ -124,7 +126,32 @@ class Normals:
             def _sf(self, x):
                 return sum(w * ndtr((mean - x) / sd) for w, mean, sd in parts)
 
+            def _ppf(self, p):
+                ends = _ends(ndtri(p))
+                low = halved(lambda x: self._cdf(x) < p, *ends)
+                return np.where(p < 0.5, low, halved(lambda x: self._sf(x) > 1.0 - p, *ends))
+
+            def _isf(self, p):
+                ends = _ends(-ndtri(p))
+                high = halved(lambda x: self._sf(x) > p, *ends)
+                return np.where(p < 0.5, high, halved(lambda x: self._cdf(x) < 1.0 - p, *ends))
+
             def _munp(self, n):
                 return moment(int(n))
 
+        def _ends(g):
+            each = [mean + sd * g for _, mean, sd in parts]
+            return np.min(each, axis=0), np.max(each, axis=0)
+
         return Mixed(name="mixture")()
+
+
+def halved(beyond: Callable[[np.ndarray], np.ndarray], low: np.ndarray, high: np.ndarray) -> np.ndarray:
+    """Where `beyond` turns from true to false between two arrays of ends, by halving, to the last bit."""
+    for _ in range(_HALVINGS):
+        middle = 0.5 * (low + high)
+        if np.all((middle == low) | (middle == high)):
+            break
+        further = beyond(middle)
+        low, high = np.where(further, middle, low), np.where(further, high, middle)
+    return 0.5 * (low + high)
