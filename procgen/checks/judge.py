@@ -73,6 +73,15 @@ def variance(s2: float, sigma2: float, dof: int) -> Finding:
     return Finding(sigma2, s2, error, log_p, lambda level: power.variance(level, sigma2, dof))
 
 
+def ratio(a: float, m: int, b: float, n: int) -> Finding:
+    """Two independent chi-squares of m and n degrees of freedom, each divided by these: exact (Fisher's law)."""
+    f = (a / m) / (b / n) if b > 0 else math.inf
+    weights, dof = (1.0 / m, -f / n), (m, n)
+    log_p = tails.two_sided(*tails.weighted_chi_squares(0.0, weights, dof)) if math.isfinite(f) else -math.inf
+    error = math.sqrt(2 / m + 2 / n)
+    return Finding(1.0, f, error, log_p, lambda level: power.ratio(level, m, n))
+
+
 def covariance(c: float, s1: float, s2: float, rho: float, dof: int) -> Finding:
     """A sample covariance of jointly normal pairs, standard deviations and correlation stated: exact."""
     log_p = tails.two_sided(*tails.covariance(c, s1, s2, rho, dof))

@@ -29,6 +29,7 @@ def shock_checks(series: str, sums: ShockSums, source: str) -> Iterator[Check]:
         return
     yield from _level_and_spread(series, sums, source)
     yield from _memory(series, sums)
+    yield from _stretches(series, sums)
     yield from _clustering(series, sums)
     yield from _law(series, sums)
     yield from _by_step(series, sums)
@@ -101,6 +102,14 @@ def _chain_weights(chains: Counter[int], lag: int) -> tuple[NDArray, NDArray]:
             weights.append(np.cos(np.pi * np.arange(1, m + 1) / (m + 1)))
             dof.append(np.full(m, float(count * paths)))
     return np.concatenate(weights), np.concatenate(dof)
+
+
+def _stretches(series: str, sums: ShockSums) -> Iterator[Check]:
+    """The variance of the sums over stretches of steps, against that of the shocks within them."""
+    for length, count, total in sums.stretches.ratios():
+        if count > 1:
+            finding = judge.ratio(total, count, float(sums.square[0]) - total, sums.n - count)
+            yield Check.of(series, "shocks: variance of sums", f"{length} steps", "memory", finding)
 
 
 def _clustering(series: str, sums: ShockSums) -> Iterator[Check]:

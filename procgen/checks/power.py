@@ -78,6 +78,13 @@ def variance(level: float, sigma2: float, dof: int) -> float:
     return sigma2 * (float(chi2.isf(level / 2, dof)) / float(chi2.ppf(1 - POWER, dof)) - 1)
 
 
+def ratio(level: float, m: int, n: int) -> float:
+    """Detectable excess over 1 of the ratio of two normal variances, exactly."""
+    from scipy.stats import f
+
+    return float(f.isf(level / 2, m, n)) / float(f.ppf(1 - POWER, m, n)) - 1
+
+
 def covariance(level: float, s1: float, s2: float, rho: float, n: int) -> float:
     """Detectable departure of a normal covariance, away from zero where it is not zero."""
     size = s1 * s2

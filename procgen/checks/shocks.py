@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 
 from procgen.checks.blocks import GROUP, Window, across, add_lagged, add_products, scratch
 from procgen.checks.scores import BINS, Scores, cluster_scores
+from procgen.checks.stretches import StretchLane, StretchSums
 from procgen.checks.uniforms import bin_counts, uniforms
 
 MEMORY_LAGS = (1, 2, 3, 4, 5, 6, 8, 12)
@@ -35,6 +36,7 @@ class ShockLane:
         self.beside = np.zeros(max(paths - 1, 0))  # products with the left neighbour
         self.length = np.zeros(paths, dtype=np.int64)
         self.view = np.empty((0, paths))
+        self.stretches = StretchLane(paths)
 
 
 @dataclass
@@ -74,6 +76,13 @@ class ShockSums:
         self.cluster = np.zeros((2, len(CLUSTER_LAGS)))
         self.asymmetry = np.zeros(2)
 
+        self.square = np.zeros(1)  # of the scores
+        self.stretches = StretchSums()
+
+    @property
+    def stretched(self) -> NDArray:
+        return self.stretches.sums
+
     def lane(self, paths: int) -> ShockLane:
         return ShockLane(paths, self.lags)
 
@@ -97,6 +106,7 @@ class ShockSums:
         self._single(z, g, lane, offset)
         self._along(g, clusters, lane, offset)
         self._across(g, known, whole, first_step + offset, lane, offset)
+        self.stretches.absorb(g, first_step + offset, lane.stretches)
 
     def _single(self, z: NDArray, g: NDArray, lane: ShockLane, offset: int) -> None:
         add_products(lane.totals[0], g, None, offset)
@@ -141,6 +151,8 @@ class ShockSums:
         lane.totals[5, ::GROUP] = 0.0  # whose left neighbour is of another lane group
         totals = across(lane.totals)
         self.sums += totals[:2] if self.scores.gaussian else totals[2:4]
+        self.square += totals[1]
+        self.stretches.finish(lane.stretches)
         self.asymmetry[1] += totals[4]
         self.neighbours += float(totals[5])
         self.memory[1] += totals[_SINGLE : _SINGLE + len(self.lags)]
@@ -164,7 +176,7 @@ class ShockSums:
             getattr(self, name)[...] += getattr(other, name)
 
 
-SHOCK_ARRAYS = ("sums", "counts", "paths", "profile", "memory", "cluster", "asymmetry")
+SHOCK_ARRAYS = ("sums", "counts", "paths", "profile", "memory", "cluster", "asymmetry", "square", "stretched")
 
 
 def _runs(known: NDArray) -> dict[int, int]:

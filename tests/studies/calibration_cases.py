@@ -136,6 +136,16 @@ def variance(dof: int) -> Findings:
     )
 
 
+def ratio(m: int, n: int) -> Findings:
+    """Two variances of normals, m and n squares each, by NumPy's chi-squares."""
+    return of_one_number(
+        lambda rng, count: (rng.chisquare(m, count) / m) / (rng.chisquare(n, count) / n),
+        lambda f: judge.ratio(max(f, 0.0) * m, m, float(n), n),
+        1.0,
+        math.sqrt(2 / m + 2 / n),
+    )
+
+
 def covariance(rho: float, n: int) -> Findings:
     """Given the first series' squares, the covariance is normal."""
 
@@ -404,6 +414,8 @@ CASES = (
     Case("shocks: asymmetric clustering, 60 steps", 4_000_000, clustering(60, 1, True), 60),
     Case("shocks: asymmetric clustering, 20 steps, 30 paths", 500_000, clustering(20, 30, True), 600),
     Case("shocks: correlation between series, 30 of ρ 0.5", 10_000_000, between_series(0.5, 30)),
+    Case("shocks: variance of sums, 12 stretches of 16 steps", 10_000_000, ratio(12, 180)),
+    Case("shocks: variance of sums, 2 stretches of 256 steps", 10_000_000, ratio(2, 510)),
     Case("worst of 200 steps", 1_000_000, worst_of(200), 200),
     Case("sums of 6 squares", 10_000_000, squares(6)),
 )

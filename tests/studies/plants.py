@@ -84,6 +84,16 @@ def shifted(x: np.ndarray, size: float, axis: int) -> np.ndarray:
     return x + _halves(x, size, axis)
 
 
+def swayed(x: np.ndarray, size: float, length: int) -> np.ndarray:
+    """The mean of each stretch of so many steps made larger: the variance of its sum is 1 + size times what it was."""
+    whole = x.shape[1] // length * length
+    more = math.sqrt(1 + size) - 1
+    out = x.copy()
+    for first in range(0, whole, length):
+        out[:, first : first + length] += more * x[:, first : first + length].mean(axis=1, keepdims=True)
+    return out
+
+
 def widened(x: np.ndarray, size: float, axis: int) -> np.ndarray:
     """Variances 1 ± a, whose normal equivalents are of root mean square `size` a shock: (a sqrt(n/2))² = n size²."""
     return x * np.sqrt(1 + _halves(x, math.sqrt(2) * size, axis))

@@ -40,6 +40,7 @@ from tests.studies.plants import (
     shifted,
     solve,
     spoilt,
+    swayed,
     t,
     widened,
 )
@@ -118,6 +119,10 @@ PLANTS = (
     Plant("shocks: variance", "all steps", noise(), drawn(lambda d: noise(_wider(1, d))), by="sd"),
     Plant("shocks: autocorrelation", "lag 1", noise(), drawn(ma_of), by="θ of an ma"),
     Plant("shocks: autocorrelation", "lag 5", noise(), drawn(lambda d: ma_of(d, 5)), by="θ of an ma at lag 5"),
+    Plant("shocks: variance of sums", "16 steps", noise(), spoilt(noise(), lambda x, d, _: swayed(x, d, 16)),
+          by="slow sways"),
+    Plant("shocks: variance of sums", "64 steps", noise(), spoilt(noise(), lambda x, d, _: swayed(x, d, 64)),
+          by="slow sways"),
     Plant("shocks: clustering", "lag 1", noise(), drawn(lambda d: [
         {"constant": 0}, {"arch": {"sd": 1, "alpha": arch_alpha(round(d, 9))}}]), by="α of an arch"),
     Plant("shocks: asymmetric clustering", "lag 1", noise(), spoilt(noise(), asymmetric), by="leverage"),

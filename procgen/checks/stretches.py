@@ -1,0 +1,85 @@
+"""Sums of recovered shocks over stretches of steps: slow memory, too weak to be seen at any one lag.
+
+The normal scores of shocks are independent, so that their sums over stretches of k steps, squared and divided by k, add
+up to a chi-square, which is independent of what is left of the scores' own squares: the ratio of both has Fisher's law,
+exactly, and does not answer to the size of the shocks. It is the variance ratio of Lo & MacKinlay (1988), over stretches
+that do not overlap. Stretches begin at multiples of their length.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+
+import numpy as np
+from numpy.typing import NDArray
+
+from procgen.checks.blocks import BLOCK, across
+
+LENGTHS = (16, 64, 256)  # the second is a block
+_GROWTH = 4  # each length is four of the one before
+
+
+class StretchLane:
+    """What is carried from tile to tile for one range of paths: totals by path, and rows that wait for more."""
+
+    def __init__(self, paths: int):
+        self.totals = np.zeros((len(LENGTHS), paths))
+        self.counts = np.zeros(len(LENGTHS))
+        self.rows: NDArray | None = None  # scores since the last block; before the first tile, not known
+        self.blocks = np.empty((0, paths))  # sums over blocks, since the last stretch of the third length
+
+
+class StretchSums:
+    """Numbers of stretches by length, and the sums of their squared sums; mergeable."""
+
+    def __init__(self) -> None:
+        self.sums = np.zeros((2, len(LENGTHS)))
+
+    def absorb(self, g: NDArray, first_step: int, lane: StretchLane) -> None:
+        """Add scores (steps, paths) of steps that follow; a stretch with one that is not finite is left out."""
+        if lane.rows is None:
+            lane.rows = np.full((first_step % BLOCK, g.shape[1]), np.nan)
+            lane.blocks = np.full((first_step // BLOCK % _GROWTH, g.shape[1]), np.nan)
+        if len(lane.rows):
+            g = np.concatenate([lane.rows, g])
+        whole = len(g) - len(g) % BLOCK
+        lane.rows = g[whole:].copy()
+        self._add_blocks(g[:whole], lane)
+
+    def _add_blocks(self, g: NDArray, lane: StretchLane) -> None:
+        short = _halved(g, 4)
+        blocks = _halved(short, 2)
+        held = np.concatenate([lane.blocks, blocks])
+        whole = len(held) - len(held) % _GROWTH
+        lane.blocks = held[whole:]
+        for k, sums in enumerate((short, blocks, _halved(held[:whole], 2))):
+            squares = sums * sums
+            known = np.isfinite(squares)
+            lane.counts[k] += np.count_nonzero(known)
+            if not known.all():
+                squares = np.where(known, squares, 0.0)
+            if k == 0:
+                squares = _halved(squares, 2)  # those of a block at once
+            lane.totals[k] = np.add.accumulate(np.concatenate([lane.totals[k][None], squares]), axis=0)[-1]
+
+    def finish(self, lane: StretchLane) -> None:
+        """Close a range of paths."""
+        if lane.rows is not None and len(lane.rows):
+            self._add_blocks(np.pad(lane.rows, ((0, BLOCK - len(lane.rows)), (0, 0)), constant_values=np.nan), lane)
+        self.sums[0] += lane.counts
+        self.sums[1] += across(lane.totals)
+
+    def merge(self, other: StretchSums) -> None:
+        self.sums += other.sums
+
+    def ratios(self) -> Iterator[tuple[int, int, float]]:
+        """Length, number of stretches, and the sum over them of (sum of scores)² / length."""
+        for length, count, total in zip(LENGTHS, *self.sums, strict=True):
+            yield length, int(count), float(total) / length
+
+
+def _halved(x: NDArray, times: int) -> NDArray:
+    """Sums of 2^times rows that follow each other, by halves: the same bits however many rows there are."""
+    for _ in range(times):
+        x = x[0::2] + x[1::2]
+    return x
