@@ -11,14 +11,18 @@ import math
 from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING
 
+from procgen.checks.words import is_signed, sort_of
+
 if TYPE_CHECKING:
     from procgen.checks.verdict import Check
 
-_WHOLE_LAW = ("law", "shocks: distribution function", "shocks: within the law's ends", "share below")
+_WHOLE_LAW = ("law", "shocks: distribution function", "shocks: within the law's ends", "share below", "share of")
+_SHAPE = "shocks: shape of the law"
 _PRODUCTS = ("shocks: autocorrelation", "shocks: neighbouring paths", "shocks: correlation between series")
 _SIZES = ("shocks: variance", "shocks: spread score")
 _SCORE = 1.5  # a spread score of s is a log variance of about 1.5 s, for laws from Laplace to normal
 _LIKE = 0.5  # share of the shocks' log variance that the values' must show to be called a matter of spread
+_FAR = 1.0  # a shift of the shocks, in their sd, that a bounded score of their spread sees as spread
 
 Groups = list[list["Check"]]
 
@@ -52,12 +56,21 @@ def _of_series(rows: Sequence[Check], sizes: Mapping[str, float]) -> Groups:
     kinds: dict[str, list[Check]] = {}
     for row in sorted(rows, key=lambda row: -_gain(row, sizes)):
         if row.outcome == "departs":
-            kinds.setdefault(row.kind, []).append(row)
-    order = sorted(kinds, key=lambda kind: (_follows(kind, kinds), -_gain(kinds[kind][0], sizes)))
+            kinds.setdefault(sort_of(row), []).append(row)
+    follows = _following(rows, kinds)
+    order = sorted(kinds, key=lambda kind: (kind in follows, -_gain(kinds[kind][0], sizes)))
     if order:
         behind = _BEHIND.get(order[0], _nothing)(rows, kinds)
         order = [kind for kind in (behind, *(kind for kind in order if kind != behind)) if kind]
-    return [kinds[kind] for kind in order]
+    return [_plainest_first(kinds[kind], sizes) for kind in order]
+
+
+def _plainest_first(group: list[Check], sizes: Mapping[str, float]) -> list[Check]:
+    """What is off at all steps alike is told before what is off step by step, if it is most of it."""
+    if not group[0].what.endswith((" by step", " by phase")):
+        return group
+    alike = [row for row in group if is_signed(row) and _gain(row, sizes) >= _LIKE * _gain(group[0], sizes)]
+    return [*alike[:1], *(row for row in group if row not in alike[:1])]
 
 
 def _gain(row: Check, sizes: Mapping[str, float]) -> float:
@@ -74,10 +87,26 @@ def _size(rows: Sequence[Check]) -> float:
     return seen.get("shocks: variance", 1.0) + seen.get("shocks: mean", 0.0) ** 2
 
 
-def _follows(kind: str, kinds: Mapping[str, list[Check]]) -> bool:
-    """A test of the whole law sees a wrong mean or variance too: it says nothing of the shape where one is found."""
-    whole = all(row.what.startswith(_WHOLE_LAW) for row in kinds[kind])
-    return kind == "law" and whole and not kinds.keys().isdisjoint(("level", "spread"))
+def _following(rows: Sequence[Check], kinds: Mapping[str, list[Check]]) -> set[str]:
+    """Kinds that say nothing of their own, for a level or spread that is found wrong makes them.
+
+    A test of the whole law sees a wrong mean or variance too. The shape of the law, and the scores of spread, are
+    blind to small ones only: they follow from a shift, or a scale, that alone would make half of what is seen.
+    """
+    simple = kinds.keys() & {"level", "spread"}
+    if not simple or not kinds.keys() & {"law", "spread"}:
+        return set()
+    from procgen.checks.shape import moved
+
+    found, follows = moved({row.what: row for row in rows}), set()
+    law = [row for row in kinds.get("law", ()) if not row.what.startswith(_WHOLE_LAW)]
+    if all(row.what == _SHAPE and _LIKE * (row.estimate or 0.0) <= found.shape for row in law):
+        follows.add("law")
+    scores = [row for row in kinds.get("spread", ()) if row.what == "shocks: spread score"]
+    if "level" in simple and scores and abs(found.shift) >= _FAR:
+        if all(_LIKE * abs(row.estimate or 0.0) <= found.spread_score for row in scores):
+            follows.add("spread")
+    return follows
 
 
 def _nothing(rows: Sequence[Check], kinds: Mapping[str, list[Check]]) -> str | None:

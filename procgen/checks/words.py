@@ -16,6 +16,12 @@ _SAYS = {
     "law": "the shape of the distribution is not the one stated",
     "dependence": "paths or series hang together otherwise than stated",
 }
+_SHARES = {
+    "none": "share of zeros",
+    "jumps": "rate of jumps",
+    "on": "share of steps that are on",
+    "demand": "share of steps with demand",
+}  # "share: " and what follows; of all others "share of " and that
 _MORE_LESS = {"level": ("higher than", "lower than"), "spread": ("larger than", "smaller than")}
 _SIGNED = ("mean", "variance", "level score", "spread score")  # how the checks end whose sign says more or less
 _WHOLE = {
@@ -27,6 +33,13 @@ _WHOLE = {
     "shocks: shape of the law": "the shocks' density is off by {}, root mean square",
     "shocks: distribution function": "the shocks' distribution function is off by up to {}",
 }
+_CORRELATIONS = {
+    "autocorrelation": "standardised autocovariance",
+    "correlation between series": "standardised covariance between series",
+    "neighbouring paths": "standardised covariance of neighbouring paths",
+    "clustering": "standardised covariance of sizes",
+}  # how checks end whose estimate is a correlation as long as spreads are as stated -> what it is in any case
+_LEAST_P = math.log(1e-300)  # below this a p is only said to be smaller
 
 
 def number(x: float | None, digits: int = 5) -> str:
@@ -39,12 +52,34 @@ def number(x: float | None, digits: int = 5) -> str:
 
 
 def p_text(log_p: float) -> str:
-    """p in few letters, also far below what a float can hold."""
+    """p in few letters; below 1e-300, only that it is."""
     if log_p > math.log(1e-4):
         return f"{math.exp(log_p):.4f}"
-    if math.isinf(log_p):
-        return "0"
+    if log_p < _LEAST_P:
+        return "< 1e−300"
     return f"1e{math.floor(log_p / math.log(10)):d}".replace("-", "−")
+
+
+def sort_of(row: Check) -> str:
+    """The kind of a check; for the share of an event that stands for itself, such as jumps, its name."""
+    return name_of(row) if row.what.startswith("share: ") and row.kind == "level" else row.kind
+
+
+def is_signed(row: Check) -> bool:
+    """Whether the sign of what is seen says that there is more, or less, than stated."""
+    return row.what.split(" over ")[0].endswith(_SIGNED) or row.what.startswith("variance of")
+
+
+def name_of(row: Check) -> str:
+    """What a check compares, for a reader: a correlation goes by that name only where it can be one."""
+    if row.what.startswith("share: "):
+        event = row.what.removeprefix("share: ")
+        return _SHARES.get(event, f"share of {event}")
+    if row.estimate is not None and abs(row.estimate) > 1.0:
+        for end, other in _CORRELATIONS.items():
+            if row.what.endswith(end):
+                return row.what.removesuffix(end) + other
+    return row.what
 
 
 def sentence(groups: list[list[Check]]) -> str:
@@ -57,17 +92,18 @@ def sentence(groups: list[list[Check]]) -> str:
     if top.what == "values":
         return f"{who}level: {top.note}"
     p = f", p {p_text(top.log_p)}" if top.log_p is not None else ""
-    also = ", ".join(group[0].kind for group in others)
-    return f"{who}{top.kind}: {_says(top)} ({_seen(top)}{p}){_more(first)}" + (
+    also = ", ".join(sort_of(group[0]) for group in others)
+    return f"{who}{sort_of(top)}: {_says(top)} ({_seen(top)}{p}){_more(first)}" + (
         f"; also {also}, which may follow from it" if also else ""
     )
 
 
 def _says(top: Check) -> str:
     """The departure in general, with its direction where the check has one."""
+    if sort_of(top) != top.kind:
+        return f"{'smaller' if (top.estimate or 0.0) < (top.theory or 0.0) else 'larger'} than stated"
     way = "not the one"
-    signed = top.what.split(" over ")[0].endswith(_SIGNED) or top.what.startswith("variance of")
-    if signed and top.kind in _MORE_LESS and top.estimate is not None and top.theory is not None:
+    if is_signed(top) and top.kind in _MORE_LESS and top.estimate is not None and top.theory is not None:
         way = _MORE_LESS[top.kind][int(top.estimate < top.theory)]
     return _SAYS[top.kind].format(way)
 
@@ -79,9 +115,9 @@ def _seen(top: Check) -> str:
     if top.what in _WHOLE and not top.probe.startswith("worst"):
         return _WHOLE[top.what].format(number(top.estimate, 4))
     if top.probe.startswith("worst"):
-        return f"{top.what} is off most at {top.probe.removeprefix('worst: ')}, by {number(top.estimate, 4)} se"
+        return f"{name_of(top)} is off most at {top.probe.removeprefix('worst: ')}, by {number(top.estimate, 4)} se"
     where = f" at {top.probe}" if top.probe else ""
-    return f"{top.what}{where} is {number(top.estimate, 4)}, stated {number(top.theory, 4)}"
+    return f"{name_of(top)}{where} is {number(top.estimate, 4)}, stated {number(top.theory, 4)}"
 
 
 def _more(group: list[Check]) -> str:

@@ -11,7 +11,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from procgen.checks import coverage
-from procgen.checks.words import number, p_text, sentence
+from procgen.checks.words import name_of, number, p_text, sentence, sort_of
 from procgen.report.pictures import gallery as galleries
 from procgen.report.pictures import page
 from procgen.report.pictures.gallery import Gallery
@@ -148,7 +148,7 @@ def _by_series(verdict: Verdict | None) -> dict[str, Sequence[str]]:
     groups: dict[tuple[str, str], list[Check]] = {}
     for row in verdict.rows if verdict is not None else ():
         if row.outcome == "departs":
-            groups.setdefault((row.series, row.kind), []).append(row)
+            groups.setdefault((row.series, sort_of(row)), []).append(row)
     found: dict[str, list[str]] = {}
     for (series, _), rows in groups.items():
         found.setdefault(series, []).append(sentence([rows]).removeprefix(f"{series}: "))
@@ -191,7 +191,7 @@ def _row(row: Check) -> str:
     if row.log_p is not None:
         width = min(4.0, -row.log_p / math.log(10) * 0.35)
         p = f'<span class="bar" style="width:{width:.2f}rem"></span>{p_text(row.log_p)}'
-    cells = [escaped(text) for text in (row.series, row.what, row.probe)]
+    cells = [escaped(text) for text in (row.series, name_of(row), row.probe)]
     figures = [number(x) for x in (row.theory, row.estimate, row.standard_error)]
     return (
         f'<tr class="{row.outcome}">'

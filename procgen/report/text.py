@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING
 
 from procgen.checks import coverage
 from procgen.checks.judge import FEW_PATHS
-from procgen.checks.words import number, p_text
+from procgen.checks.words import name_of, number, p_text
 
 if TYPE_CHECKING:
     from procgen.checks.verdict import Check, Verdict
@@ -83,7 +83,7 @@ def _worst(rows: Sequence[Check], verdict: Verdict) -> list[str]:
     head = ("", "series", "check", "at", "theory", "estimate", "p")
     cells = [
         (
-            bar(row.log_p or 0.0, level), row.series, row.what, row.probe, number(row.theory), number(row.estimate),
+            bar(row.log_p or 0.0, level), row.series, name_of(row), row.probe, number(row.theory), number(row.estimate),
             p_text(row.log_p or 0.0),
         )
         for row in rows

@@ -122,3 +122,58 @@ def test_headline_names_series_and_kind_the_largest_first():
         "x: spread: the variance is larger than stated (shocks: variance at all steps is 0.012, stated 0, p 1e−33); "
         "also memory, which may follow from it",
     ]
+
+
+def of(what, estimate, log_p, kind, series="x", probe="all steps", theory=0.0):
+    return Check(series, what, probe, kind, theory, estimate, 0.001, log_p)
+
+
+@pytest.mark.parametrize(
+    ("shocks", "first"),
+    [
+        # The sums of normal shocks, shifted by 5 sd: the shape of their law is farther off than their mean.
+        ([("shocks: mean", 5.0, -1e6, "level"), ("shocks: shape of the law", 7.16, -2e6, "law")], "level"),
+        ([("shocks: variance", 0.01, -1.4e5, "spread"), ("shocks: shape of the law", 2.2, -2e5, "law")], "spread"),
+        # Another law of the same variance, whose mean is off by a little: here the shape stands for itself.
+        ([("shocks: mean", 0.05, -100.0, "level"), ("shocks: shape of the law", 0.4, -6e3, "law")], "law"),
+        # Bounded scores of a heavy-tailed law see a large shift as spread, too: shift 5 makes 2.61 and 4.4.
+        ([("shocks: level score", 2.61, -2e5, "level"), ("shocks: spread score", 4.4, -6e5, "spread")], "level"),
+        ([("shocks: level score", 0.3, -3e3, "level"), ("shocks: spread score", 1.5, -6e4, "spread")], "spread"),
+    ],
+)
+def test_what_follows_from_a_level_or_spread_that_is_far_off_does_not_lead(shocks, first):
+    rows = [of(what, estimate, log_p, kind) for what, estimate, log_p, kind in shocks]
+    assert Verdict(rows, 0.001).headline[0].startswith(f"x: {first}: ")
+
+
+def test_what_is_off_alike_at_all_steps_is_told_before_what_is_off_step_by_step():
+    by_step = of("shocks: level by step", 0.4, -900.0, "level", probe="sum over steps")
+    mean = of("shocks: mean", 0.38, -800.0, "level")
+    assert "the mean is higher than stated (shocks: mean" in Verdict([by_step, mean], 0.001).headline[0]
+    small = of("shocks: mean", 0.03, -30.0, "level")
+    assert "the shocks' mean at a step" in Verdict([by_step, small], 0.001).headline[0]
+
+
+def test_shares_of_events_have_plain_names():
+    rows = [
+        of("share: none", 0.37, -900.0, "level", theory=0.3),
+        of("mean over steps", 1.08, -90.0, "level", theory=1.2),
+        of("share: jumps", 0.1, -30.0, "level", series="y", theory=0.2),
+        of("share: on after on", 0.5, -25.0, "memory", series="z", theory=0.6),
+    ]
+    assert Verdict(rows, 0.001).headline == [
+        "x: share of zeros: larger than stated (share of zeros at all steps is 0.37, stated 0.3, p < 1e−300); also "
+        "level, which may follow from it",
+        "y: rate of jumps: smaller than stated (rate of jumps at all steps is 0.1, stated 0.2, p 1e−14)",
+        "z: memory: values follow earlier ones otherwise than stated (share of on after on at all steps is 0.5, stated "
+        "0.6, p 1e−11)",
+    ]
+
+
+def test_a_correlation_is_called_so_only_where_it_can_be_one():
+    for estimate, name in ((0.4, "shocks: autocorrelation"), (-7.5e6, "shocks: standardised autocovariance")):
+        row = of("shocks: autocorrelation", estimate, -5000.0, "memory", probe="lag 1")
+        verdict = Verdict([row], 0.001)
+        assert f"({name} at lag 1 is " in verdict.headline[0]
+        assert f"  {name}  lag 1" in verdict.to_text()
+        assert "< 1e−300" in verdict.to_text() and "1e−2" not in verdict.to_text()
