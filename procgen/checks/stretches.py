@@ -1,9 +1,9 @@
 """Sums of recovered shocks over stretches of steps: slow memory, too weak to be seen at any one lag.
 
-The normal scores of shocks are independent, so that their sums over stretches of k steps, squared and divided by k, add
-up to a chi-square, which is independent of what is left of the scores' own squares: the ratio of both has Fisher's law,
-exactly, and does not answer to the size of the shocks. It is the variance ratio of Lo & MacKinlay (1988), over stretches
-that do not overlap. Stretches begin at multiples of their length.
+The normal scores of shocks are independent, so that their sums over stretches of k steps, squared and divided by k,
+add up to a chi-square, independent of what is left of the scores' own squares: the ratio of both has Fisher's law,
+exactly, and does not answer to the size of the shocks. It is the variance ratio of Lo & MacKinlay (1988), over
+stretches that do not overlap. They begin at multiples of their length.
 """
 
 from __future__ import annotations

@@ -1,4 +1,4 @@
-"""Sums of shocks over stretches of steps: against NumPy's sums and SciPy's F law, however they are cut, and saboteurs."""
+"""Sums of shocks over stretches of steps: against NumPy's sums and SciPy's F law, however cut, and saboteurs."""
 
 import math
 
