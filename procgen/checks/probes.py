@@ -183,9 +183,7 @@ def plan_series(name: str, theory: Any, steps: int, grain: float, periods: Seque
     if not plan.unknown:
         _marginals(plan)
         if not plan.gaussian:
-            plan.product_sd = {
-                (i, j): _product_sd(plan, i, j) for i, j in [*((i, i) for i in range(len(at))), *plan.pairs]
-            }
+            plan.product_sd = _product_sds(plan, [*((i, i) for i in range(len(at))), *plan.pairs])
         plan.coarse = _rounded(plan)
         plan.pool = _pool(plan, steps)
         _as_stored(plan)
@@ -222,10 +220,25 @@ def _marginals(plan: SeriesPlan) -> None:
             plan.scores[i] = Scores(Marginal(law, float(plan.mean[i]), float(np.sqrt(plan.variance[i]))))
 
 
+def _product_sds(plan: SeriesPlan, pairs: Sequence[tuple[int, int]]) -> dict[tuple[int, int], float | None]:
+    """Standard deviations of products at pairs of probes: all at once, or one by one where some are not known."""
+    moving = [pair for pair in pairs if not plan.constant[list(pair)].any()]
+    found: dict[tuple[int, int], float | None] = dict.fromkeys(pairs)
+    if not moving or not plan.highest > 4:
+        return found
+    i, j = np.array(moving).T
+    squares = plan.theory.covariance_of_squares(plan.steps[j], plan.steps[i])
+    known = [v if a == b else plan.covariance[a, b] for (a, b), v in zip(moving, plan.variance[i], strict=True)]
+    if squares is None or None in known:
+        return found | {pair: _product_sd(plan, *pair) for pair in moving}
+    variances = squares + plan.variance[i] * plan.variance[j] - np.square(known)
+    return found | {
+        pair: float(np.sqrt(v)) if v > 0 else None for pair, v in zip(moving, variances.tolist(), strict=True)
+    }
+
+
 def _product_sd(plan: SeriesPlan, i: int, j: int) -> float | None:
     """Standard deviation of the product of the deviations at two probes, from the covariance of their squares."""
-    if plan.constant[i] or plan.constant[j] or not plan.highest > 4:
-        return None
     first, lag = int(plan.steps[i]), int(plan.steps[j] - plan.steps[i])
     if i == j:
         excess = plan.theory.excess_kurtosis_at(first)

@@ -212,6 +212,13 @@ class MixedSeries(SeriesTheory):
 
         return self._try("autocovariance_of_squares", lambda: self._of_squares(later, first))
 
+    def covariance_of_squares(self, t, s):
+        pairs = [(_steps(a).ravel(), _steps(b).ravel()) for a, b in zip(np.ravel(t), np.ravel(s), strict=True)]
+        return self._try(
+            "covariance_of_squares",
+            lambda: np.concatenate([self._of_squares(a, b) for a, b in pairs]).reshape(np.shape(t)),
+        )
+
     def _of_squares(self, t: NDArray, s: NDArray) -> NDArray:
         both = self.mixture.average(lambda nodes: self._squares(nodes, t, s))
         return both - self._covariance(t, t) * self._covariance(s, s)

@@ -114,6 +114,12 @@ class SeriesTheory:
             lambda: fourth.autocovariance_of_squares(self.expression, later, np.full(later.shape, from_step)),
         )
 
+    def covariance_of_squares(self, t, s) -> np.ndarray | None:
+        """Cov((x - E x)^2 at t, the same at s), for arrays of steps of one shape."""
+        return self._try(
+            "covariance_of_squares", lambda: fourth.autocovariance_of_squares(self.expression, _steps(t), _steps(s))
+        )
+
     def autocorrelation_of_squares(self, lags, from_step: int = 0) -> np.ndarray | None:
         """Correlation of (x - E x)^2 at from_step + lag with the same at from_step, at lags >= 0."""
 
