@@ -11,12 +11,14 @@ import math
 from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING
 
-from procgen.checks.words import is_signed, sort_of
+from procgen.checks.words import FARTHEST, is_signed, sort_of
 
 if TYPE_CHECKING:
     from procgen.checks.verdict import Check
 
-_WHOLE_LAW = ("law", "shocks: distribution function", "shocks: within the law's ends", "share below", "share of")
+_WHOLE_LAW = (
+    "law", "shocks: distribution function", "shocks: within the law's ends", "share below", "share of", FARTHEST,
+)  # fmt: skip
 _SHAPE = "shocks: shape of the law"
 _PRODUCTS = ("shocks: autocorrelation", "shocks: neighbouring paths", "shocks: correlation between series")
 _SIZES = ("shocks: variance", "shocks: spread score")
@@ -47,8 +49,8 @@ def _largest(groups: Groups, sizes: Mapping[str, float]) -> float:
 
 
 def _structure_apart(groups: Groups) -> list[Groups]:
-    facts = [group for group in groups if group[0].kind == "structure"]
-    rest = [group for group in groups if group[0].kind != "structure"]
+    facts = [group for group in groups if sort_of(group[0]) == "structure"]
+    rest = [group for group in groups if sort_of(group[0]) != "structure"]
     return [part for part in (facts, rest) if part]
 
 
@@ -58,7 +60,7 @@ def _of_series(rows: Sequence[Check], sizes: Mapping[str, float]) -> Groups:
         if row.outcome == "departs":
             kinds.setdefault(sort_of(row), []).append(row)
     follows = _following(rows, kinds)
-    order = sorted(kinds, key=lambda kind: (kind in follows, -_gain(kinds[kind][0], sizes)))
+    order = sorted(kinds, key=lambda kind: (kind != FARTHEST, kind in follows, -_gain(kinds[kind][0], sizes)))
     if order:
         behind = _BEHIND.get(order[0], _nothing)(rows, kinds)
         order = [kind for kind in (behind, *(kind for kind in order if kind != behind)) if kind]

@@ -184,7 +184,7 @@ class Gather:
         return [values for values in found if values.dtype == kind]
 
 
-_FACTS = ("not_finite", "off_grid", "narrow")
+_FACTS = ("not_finite", "off_grid", "narrow", "far")
 
 
 def _lags(plan: SeriesPlan) -> tuple[int, ...]:

@@ -9,6 +9,7 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.checks import extremes
 from procgen.checks.verdict import Check
 
 _SAMPLE = 61  # every so manieth step's bits are looked at for a detour through float32; at least 32 steps
@@ -25,6 +26,7 @@ class Precision:
     decimals: int | None
     random: bool
     discrete: bool = False  # few values: float32 may hold them all, and paths may be equal
+    reach: extremes.Reach | None = None  # how far values may lie from their mean
 
 
 @dataclass
@@ -36,6 +38,7 @@ class Structure:
     not_finite: dict[str, list[int]] = field(default_factory=dict)  # series -> [count, path, step of the first]
     off_grid: dict[str, list[int]] = field(default_factory=dict)
     narrow: dict[str, list[int]] = field(default_factory=dict)  # series -> [values that fit float32, whole ones, all]
+    far: dict[str, list[extremes.Far]] = field(default_factory=dict)  # series -> its values farthest from their mean
     prints: list[tuple[int, NDArray[np.uint64]]] = field(default_factory=list)  # (first path, (paths, series))
 
     def absorb(self, column: int, x: NDArray, first_path: int, first_step: int, prints: NDArray[np.uint64]) -> bool:
@@ -60,6 +63,8 @@ class Structure:
             seen = self.narrow.setdefault(what.name, [0, 0, 0])
             for k, count in enumerate((fits, whole, sample.size)):
                 seen[k] += count
+        if what.reach is not None:
+            self.far[what.name] = what.reach.farthest(x, first_path, first_step, self.far.get(what.name, ()))
         return finite
 
     def close(self, first_path: int, prints: NDArray[np.uint64]) -> None:
@@ -84,6 +89,8 @@ class Structure:
                 mine[name] = [old[0] + count, *min((old[1], old[2]), (path, step))]
         for name, counts in other.narrow.items():
             self.narrow[name] = [a + b for a, b in zip(self.narrow.get(name, [0, 0, 0]), counts, strict=True)]
+        for name, values in other.far.items():
+            self.far[name] = extremes.merged([*self.far.get(name, ()), *values])
         self.prints += other.prints
 
     def checks(self, chance_of_equal: dict[str, float]) -> Iterator[Check]:
@@ -91,6 +98,9 @@ class Structure:
         for what in self.series:
             yield self._finite(what.name)
             yield self._precision(what)
+            if what.reach is not None:
+                n = self.steps * sum(len(rows) for _, rows in self.prints)
+                yield from extremes.checks(what.name, what.reach, self.far.get(what.name, ()), n)
         if self.prints:
             yield from self._copies(chance_of_equal)
 

@@ -11,6 +11,7 @@ from typing import Any
 import numpy as np
 
 from procgen.checks.atoms import may_stay
+from procgen.checks.extremes import Reach
 from procgen.checks.gather import Gather, Plan
 from procgen.checks.judge_moments import cross_moments, moment_checks
 from procgen.checks.judge_shocks import cross_checks, shock_checks
@@ -111,7 +112,8 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
         series.append(plan)
         routes[name] = way
         random = th[name].random
-        precision.append(Precision(name, declared.type, declared.decimals, random, lumpy(th[name])))
+        reach = Reach(th[name], grain) if random else None
+        precision.append(Precision(name, declared.type, declared.decimals, random, lumpy(th[name]), reach))
     ways = [way for way in routes.values() if isinstance(way, Route) and way.scores is not None]
     pairs = {(a.series, b.series): expected(a, b, th.axis.space) for a, b in list(combinations(ways, 2))[:PAIR_LIMIT]}
     blind = [name for name, way in routes.items() if isinstance(way, Cannot) or way.scores is None]

@@ -39,6 +39,7 @@ _CORRELATIONS = {
     "neighbouring paths": "standardised covariance of neighbouring paths",
     "clustering": "standardised covariance of sizes",
 }  # how checks end whose estimate is a correlation as long as spreads are as stated -> what it is in any case
+FARTHEST = "farthest value"
 _LEAST_P = math.log(1e-300)  # below this a p is only said to be smaller
 
 
@@ -62,6 +63,8 @@ def p_text(log_p: float) -> str:
 
 def sort_of(row: Check) -> str:
     """The kind of a check; for the share of an event that stands for itself, such as jumps, its name."""
+    if row.what == FARTHEST and row.kind == "structure":
+        return FARTHEST
     return name_of(row) if row.what.startswith("share: ") and row.kind == "level" else row.kind
 
 
@@ -87,15 +90,16 @@ def sentence(groups: list[list[Check]]) -> str:
     first, *others = groups
     top = first[0]
     who = f"{top.series}: " if top.series else ""
+    also = ", ".join(sort_of(group[0]) for group in others)
+    follow = f"; also {also}, which may follow from it" if also else ""
+    if top.what == FARTHEST:
+        return f"{who}{top.note}{follow}"
     if top.kind == "structure":
         return f"{who}structure: {top.note}{_more(first)}"
     if top.what == "values":
         return f"{who}level: {top.note}"
     p = f", p {p_text(top.log_p)}" if top.log_p is not None else ""
-    also = ", ".join(sort_of(group[0]) for group in others)
-    return f"{who}{sort_of(top)}: {_says(top)} ({_seen(top)}{p}){_more(first)}" + (
-        f"; also {also}, which may follow from it" if also else ""
-    )
+    return f"{who}{sort_of(top)}: {_says(top)} ({_seen(top)}{p}){_more(first)}{follow}"
 
 
 def _says(top: Check) -> str:

@@ -1,0 +1,136 @@
+"""The values farthest from their mean, in standard deviations: one that is absurd is named, before what it distorts.
+
+Of N values the farthest lies beyond d with a probability of at most N times that of one: 2 Φ(−d) for a Gaussian
+series, and for any other at most 1/d², or κ/d⁴ with its kurtosis κ (Bonferroni; Bienaymé 1853, Chebyshev 1867).
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Iterator, Sequence
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from procgen.checks.judge import Finding
+from procgen.checks.verdict import Check
+from procgen.checks.words import FARTHEST, number
+
+KEPT = 32  # values of a series
+_LEAST = 4.0  # standard deviations, below which a value is of no interest
+_CHUNK = 4096  # steps whose theory is asked for at once
+_OUTSIDE = math.log(0.05)  # of a value that is farther than all values of N should be
+_ABSURD = 2.0  # times as far as the farthest of N should be
+_RARE = 1000  # one absurd value in so many is an accident, more of them are a behaviour
+
+Far = tuple[float, int, int, float, float, float]  # size in sd, minus path, minus step, value, mean, sd
+
+
+class Reach:
+    """Mean and standard deviation of every step of a series, and the chance of a value so far away."""
+
+    def __init__(self, theory: Any, grain: float):
+        self.theory, self.grain = theory, grain
+        self._chunks: dict[int, tuple[NDArray, NDArray]] = {}
+
+    def farthest(self, x: NDArray, first_path: int, first_step: int, known: Sequence[Far]) -> list[Far]:
+        """The KEPT farthest of those known and the values of a tile (steps, paths); what is not finite is left out."""
+        mean, sd = self._at(first_step, len(x))
+        with np.errstate(invalid="ignore", divide="ignore"):
+            worst = np.maximum(np.fmax.reduce(x, axis=1) - mean, mean - np.fmin.reduce(x, axis=1)) / sd
+            least = max(_LEAST, known[-1][0]) if len(known) == KEPT else _LEAST
+            rows = np.flatnonzero(worst >= least)
+            if not rows.size:
+                return list(known)
+            sizes = np.abs(x[rows] - mean[rows, None]) / sd[rows, None]
+        sizes[~np.isfinite(x[rows])] = 0.0
+        found = list(known)
+        for at, path in np.argwhere(sizes >= least).tolist():
+            row = int(rows[at])
+            place = -first_path - path, -first_step - row
+            found.append((float(sizes[at, path]), *place, float(x[row, path]), float(mean[row]), float(sd[row])))
+        return merged(found)
+
+    def _at(self, first: int, count: int) -> tuple[NDArray, NDArray]:
+        chunks = [self._chunk(k) for k in range(first // _CHUNK, (first + count - 1) // _CHUNK + 1)]
+        cut = slice(first % _CHUNK, first % _CHUNK + count)
+        mean, sd = (np.concatenate(parts)[cut] for parts in zip(*chunks, strict=True))
+        return mean, sd
+
+    def _chunk(self, k: int) -> tuple[NDArray, NDArray]:
+        if k not in self._chunks:
+            steps = np.arange(k * _CHUNK, (k + 1) * _CHUNK)
+            mean, variance = self.theory.mean(steps), self.theory.variance(steps)
+            if mean is None or variance is None:
+                mean = variance = np.full(_CHUNK, np.nan)
+            while len(self._chunks) > 3:
+                self._chunks.pop(next(iter(self._chunks)))
+            usable = np.isfinite(variance) & (variance > 0.0)
+            self._chunks[k] = mean, np.sqrt(np.where(usable, variance, np.nan))
+        return self._chunks[k]
+
+    def log_chance(self, far: Far) -> float:
+        """Logarithm of the chance, at most, that one value lies so far from its mean."""
+        size = far[0] - self.grain / 2.0 / far[5]
+        if size <= 1.0:
+            return 0.0
+        if self.theory.gaussian:
+            from scipy.special import log_ndtr
+
+            return math.log(2.0) + float(log_ndtr(-size))
+        bounds = [-2.0 * math.log(size)]
+        if (self.theory.highest_moment or 0.0) > 4.0:
+            excess = self.theory.excess_kurtosis_at(-far[2])
+            bounds += [] if excess is None else [math.log(max(excess, -2.0 + 1e-9) + 3.0) - 4.0 * math.log(size)]
+        return min(bounds)
+
+
+def merged(found: Sequence[Far]) -> list[Far]:
+    """The farthest of all, in order."""
+    return sorted(map(tuple, found), reverse=True)[:KEPT]  # type: ignore[arg-type]
+
+
+def checks(series: str, reach: Reach, known: Sequence[Far], n: int) -> Iterator[Check]:
+    """Whether the farthest of n values of a series is no farther than chance carries it."""
+    if not known:
+        return
+    first = known[0]
+    logs = [math.log(n) + reach.log_chance(far) for far in known]
+    outside = sum(log_p < _OUTSIDE for log_p in logs)
+    allowed = _reach(reach, first, n)
+    alone = outside <= min(KEPT - 1, max(1, n // _RARE)) and first[0] > _ABSURD * allowed
+    # A few absurd values are a fault of the data; many, or hardly outside ones, speak of the law.
+    kind = "structure" if alone or not outside else "law"
+    finding = Finding(first[4], first[3], first[5], min(0.0, logs[0]), _detect(reach, first, n))
+    check = Check.of(series, FARTHEST, f"path {-first[1]}, step {-first[2]}", kind, finding)
+    if outside:
+        many = "one value" if outside == 1 else f"{outside} values" if outside < KEPT else f"at least {KEPT} values"
+        each = "" if outside == 1 else "the farthest "
+        check.note = (
+            f"{many} {'far ' if alone else ''}outside what the law allows: {each}{check.probe}, value "
+            f"{number(first[3], 6)} (expected about {number(first[4], 4)} ± {number(first[5], 3)})"
+        )
+    yield check
+
+
+def _reach(reach: Reach, far: Far, n: int) -> float:
+    """About how far, in sd, the farthest of n values may lie."""
+    return _solved(lambda size: math.log(n) + reach.log_chance((size, *far[1:])), _OUTSIDE)
+
+
+def _detect(reach: Reach, far: Far, n: int) -> Callable[[float], float]:
+    """How far from its mean a single value is found at a level, in the unit of the series."""
+    return lambda level: (
+        far[5] * _solved(lambda size: math.log(n) + reach.log_chance((size, *far[1:])), math.log(level))
+    )
+
+
+def _solved(falling: Callable[[float], float], target: float) -> float:
+    low, high = 1.0, 2.0
+    while falling(high) > target and high < 1e300:
+        low, high = high, high * 2.0
+    for _ in range(40):
+        middle = (low + high) / 2.0
+        low, high = (middle, high) if falling(middle) > target else (low, middle)
+    return high

@@ -1,0 +1,128 @@
+"""One absurd value is named with its place, and leads; a level, spread or law that is off is not taken for it."""
+
+import json
+
+import numpy as np
+import pytest
+from scipy import stats
+
+from procgen.checks.extremes import KEPT, Reach, checks, merged
+from procgen.checks.structure import Structure
+from procgen.checks.words import name_of
+from tests.studies.departures import draw, spec_of, verdict
+
+AR = [{"constant": 10}, {"ar": {"phi": 0.6, "sd": 1}}]
+HEAVY = [{"white_noise": {"sd": 1, "law": {"student_t": {"df": 5}}}}]
+COUNTS = [{"poisson": {"mean": 1.2}}]
+
+
+class Normal:
+    """What is asked of theory, for independent normals of mean 3 and sd 2."""
+
+    gaussian = True
+
+    def mean(self, steps):
+        return np.full(len(steps), 3.0)
+
+    def variance(self, steps):
+        return np.full(len(steps), 4.0)
+
+
+class Student(Normal):
+    """The same moments, of Student's law with 5 degrees of freedom: excess kurtosis 6 / (5 - 4)."""
+
+    gaussian, highest_moment = False, 5.0
+
+    def excess_kurtosis_at(self, step):
+        return 6.0
+
+
+def far(size):
+    return (size, 0, 0, 3.0 + 2.0 * size, 3.0, 2.0)
+
+
+def test_chance_of_one_value_against_scipy():
+    normal, student = Reach(Normal(), 0.0), Reach(Student(), 0.0)
+    law = stats.t(5, scale=np.sqrt(3 / 5))
+    for size in (4.0, 6.0, 20.0, 1e4):
+        assert normal.log_chance(far(size)) == pytest.approx(np.log(2) + stats.norm.logsf(size))
+        assert np.exp(student.log_chance(far(size))) >= 2 * law.sf(size)  # a bound, of order d^-4
+    assert student.log_chance(far(100.0)) == pytest.approx(np.log(9e-8))
+    assert Reach(Student(), 4.0).log_chance(far(5.0)) == pytest.approx(np.log(9.0 / 4.0**4))  # a cell of rounding less
+
+
+def test_true_values_are_flagged_no_more_often_than_stated():
+    x, reach = 3.0 + 2.0 * np.random.default_rng(5).standard_normal((50, 2000 * 20)), Reach(Normal(), 0.0)
+    p = []
+    for rows in np.split(x, 2000, axis=1):
+        p += [check.p for check in checks("x", reach, reach.farthest(rows, 0, 0, ()), rows.size)]
+    # Bonferroni over 1,000 values is all but exact here: 100 expected, sd 10, hence beyond 150 once in 2e6 seeds.
+    assert 60 < np.count_nonzero(np.array(p) <= 0.05) < 150
+
+
+@pytest.mark.parametrize("width", [1, 7, 64])
+def test_the_farthest_are_the_same_however_the_data_are_cut(width):
+    x = 3.0 + 2.0 * np.random.default_rng(2).standard_t(4, (640, 40))
+    x[17, 3] = np.nan
+    reach, found = Reach(Normal(), 0.0), []
+    for paths in np.split(np.arange(40), [11, 30]):
+        mine = []
+        for step in range(0, 640, width):
+            mine = reach.farthest(x[step : step + width, paths], int(paths[0]), step, mine)
+        found = merged([*found, *json.loads(json.dumps(mine))])
+    sizes = np.nan_to_num(np.abs(x - 3.0) / 2.0)
+    order = np.argsort(-sizes, axis=None)[:KEPT]
+    assert [size for size, *_ in found] == pytest.approx(np.sort(sizes.ravel()[order])[::-1])
+    assert [(-step, -path) for _, path, step, *_ in found] == [divmod(int(k), 40) for k in order]
+
+
+def test_sums_of_two_processes_merge():
+    from procgen.checks.structure import Precision
+
+    parts = [Structure([Precision("x", "float64", None, True)], 5) for _ in range(2)]
+    parts[0].far["x"], parts[1].far["x"] = [far(5.0)], [list(far(9.0))]
+    parts[0].merge(parts[1])
+    assert parts[0].far["x"] == [far(9.0), far(5.0)]
+
+
+@pytest.mark.parametrize("body", [AR, HEAVY, COUNTS], ids=["ar", "heavy tails", "counts"])
+def test_one_absurd_value_leads_with_its_place(body):
+    values = draw(spec_of(body, 400, 200, 3))
+    assert verdict(body, values).agrees is True
+    values["x"][11, 145] = 1e6
+    found = verdict(body, values)
+    mean = {"ar": 10, "white_noise": 0, "poisson": 1.2}[next(iter(body[-1]))]
+    assert found.agrees is False
+    assert found.headline[0].startswith(
+        f"x: one value far outside what the law allows: path 11, step 145, value 1e+06 (expected about {mean} ± "
+    )
+    assert all(abs(row.estimate or 0.0) <= 1.0 for row in found.rows if name_of(row).endswith("correlation"))
+
+
+def test_several_absurd_values_are_counted():
+    values = draw(spec_of(AR, 400, 200, 3))
+    values["x"][:3, 50] = -999.0
+    line = verdict(AR, values).headline[0]
+    assert line.startswith("x: 3 values far outside what the law allows: the farthest path ") and "value −999 (" in line
+
+
+@pytest.mark.parametrize(
+    ("change", "first"),
+    [
+        (lambda x: x + 12.5, "x: level: the mean is higher than stated"),
+        (lambda x: 10 + 2 * (x - 10), "x: spread: the variance is larger than stated"),
+        (lambda x: 10 + 100 * (x - 10), "x: spread: the variance is larger than stated"),
+    ],
+    ids=["mean 10 sd off", "sd doubled", "sd times 100"],
+)
+@pytest.mark.parametrize("paths", [30, 400])
+def test_a_level_or_spread_that_is_far_off_is_not_taken_for_absurd_values(change, first, paths):
+    values = draw(spec_of(AR, paths, 200, 3))
+    values["x"] = change(values["x"])
+    assert verdict(AR, values).headline[0].startswith(first)
+
+
+def test_heavier_tails_are_a_matter_of_the_law():
+    normal, heavy = [{"white_noise": {"sd": 1}}], [{"white_noise": {"sd": 1, "law": {"student_t": {"df": 5}}}}]
+    found = verdict(normal, draw(spec_of(heavy, 400, 200, 3)))
+    assert found.headline[0].startswith("x: law: ")
