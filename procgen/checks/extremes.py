@@ -24,7 +24,7 @@ _OUTSIDE = math.log(0.05)  # of a value that is farther than all values of N sho
 _ABSURD = 2.0  # times as far as the farthest of N should be
 _RARE = 1000  # one absurd value in so many is an accident, more of them are a behaviour
 
-Far = tuple[float, int, int, float, float, float]  # size in sd, minus path, minus step, value, mean, sd
+Far = list[Any]  # size in sd, minus path, minus step, value, mean, sd: a list, as JSON has it
 
 
 class Reach:
@@ -49,7 +49,7 @@ class Reach:
         for at, path in np.argwhere(sizes >= least).tolist():
             row = int(rows[at])
             place = -first_path - path, -first_step - row
-            found.append((float(sizes[at, path]), *place, float(x[row, path]), float(mean[row]), float(sd[row])))
+            found.append([float(sizes[at, path]), *place, float(x[row, path]), float(mean[row]), float(sd[row])])
         return merged(found)
 
     def _at(self, first: int, count: int) -> tuple[NDArray, NDArray]:
@@ -88,7 +88,7 @@ class Reach:
 
 def merged(found: Sequence[Far]) -> list[Far]:
     """The farthest of all, in order."""
-    return sorted(map(tuple, found), reverse=True)[:KEPT]  # type: ignore[arg-type]
+    return sorted(found, reverse=True)[:KEPT]
 
 
 def checks(series: str, reach: Reach, known: Sequence[Far], n: int) -> Iterator[Check]:
@@ -116,13 +116,13 @@ def checks(series: str, reach: Reach, known: Sequence[Far], n: int) -> Iterator[
 
 def _reach(reach: Reach, far: Far, n: int) -> float:
     """About how far, in sd, the farthest of n values may lie."""
-    return _solved(lambda size: math.log(n) + reach.log_chance((size, *far[1:])), _OUTSIDE)
+    return _solved(lambda size: math.log(n) + reach.log_chance([size, *far[1:]]), _OUTSIDE)
 
 
 def _detect(reach: Reach, far: Far, n: int) -> Callable[[float], float]:
     """How far from its mean a single value is found at a level, in the unit of the series."""
     return lambda level: (
-        far[5] * _solved(lambda size: math.log(n) + reach.log_chance((size, *far[1:])), math.log(level))
+        far[5] * _solved(lambda size: math.log(n) + reach.log_chance([size, *far[1:]]), math.log(level))
     )
 
 

@@ -38,7 +38,7 @@ class Student(Normal):
 
 
 def far(size):
-    return (size, 0, 0, 3.0 + 2.0 * size, 3.0, 2.0)
+    return [size, 0, 0, 3.0 + 2.0 * size, 3.0, 2.0]
 
 
 def test_chance_of_one_value_against_scipy():
@@ -80,7 +80,7 @@ def test_sums_of_two_processes_merge():
     from procgen.checks.structure import Precision
 
     parts = [Structure([Precision("x", "float64", None, True)], 5) for _ in range(2)]
-    parts[0].far["x"], parts[1].far["x"] = [far(5.0)], [list(far(9.0))]
+    parts[0].far["x"], parts[1].far["x"] = [far(5.0)], [far(9.0)]
     parts[0].merge(parts[1])
     assert parts[0].far["x"] == [far(9.0), far(5.0)]
 
