@@ -13,7 +13,7 @@ next.
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import date, datetime, time, timedelta
 from fractions import Fraction
 from zoneinfo import ZoneInfo
@@ -36,6 +36,7 @@ from procgen.spec.units import (
 from procgen.spec.zones import offsets
 
 LAST_YEAR = 9998  # one short of what a datetime can hold, for the ends of steps and for time zones
+_NEEDS_TIME = "needs time: {start: …, every: …}; give them, or write a number of steps"
 _EPOCH = date(1970, 1, 1).toordinal()
 
 
@@ -52,6 +53,7 @@ class Grid:
     zone : name of the time zone; None is UTC.
     stamp : "begin" or "end": which end of a step its stamp is.
     holidays : days that are not business days, beside Saturdays and Sundays.
+    uneven : the length of the steps whose equal parts these are, where the parts have no calendar.
     """
 
     steps: int
@@ -60,6 +62,22 @@ class Grid:
     zone: str | None = None
     stamp: str = "begin"
     holidays: tuple[date, ...] = ()
+    uneven: str = ""  # the length of the steps that were cut into parts without a calendar
+
+    def cut(self, parts: int) -> Grid:
+        """Return the grid of steps cut into so many equal parts; without a calendar where these are no whole ms.
+
+        Days and weeks have equal parts only where no clock changes.
+        """
+        steps = self.steps * parts
+        if self.every is None:
+            return replace(self, steps=steps)
+        whole = self.every[1] in ABSOLUTE or (self.every[1] in DAYS and self.zone is None)
+        if not whole or self._length % (parts * LENGTH["ms"]):
+            return replace(self, steps=steps, start=None, every=None, uneven=self._every)
+        length = self._length // parts
+        unit = next(unit for unit in ("h", "min", "s", "ms") if length % LENGTH[unit] == 0)
+        return replace(self, steps=steps, every=(length // LENGTH[unit], unit))
 
     def stamps(self, first_step: int, count: int) -> np.ndarray:
         """Return the stamps of `count` steps from `first_step`: int64 (count,), µs of UTC since 1970.
@@ -101,7 +119,8 @@ class Grid:
         if name == "step":
             return float(count)
         if self.every is None:
-            raise ValueError(f"per: {unit} needs the length of a step; give time: {{every: 1h, …}}, or write per: step")
+            need = f"needs the length of a step; {self._lack('every: 1h, …')}, or write per: step"
+            raise ValueError(f"per: {unit} {need}")
         return float(count * LENGTH[name] / self._length)
 
     def span_steps(self, text: str) -> float:
@@ -114,7 +133,7 @@ class Grid:
         if unit == "step":
             return float(count)
         if self.every is None:
-            need = "needs the length of a step; give time: {every: 1h, …}, or write a number of steps"
+            need = f"needs the length of a step; {self._lack('every: 1h, …')}, or write a number of steps"
             raise ValueError(f"{shown(text)} {need}")
         step = self.every[1]
         if _family(unit) != _family(step):
@@ -133,7 +152,8 @@ class Grid:
                 f"got {shown(text)}"
             )
         if self.start is None or self.every is None:
-            raise ValueError(f"{shown(text)} needs time: {{start: …, every: …}}; give them, or write a number of steps")
+            need = f"needs the steps' times; {self._lack('start: …, every: …')}, or write a number of steps"
+            raise ValueError(f"{shown(text)} {need if self.uneven else _NEEDS_TIME}")
         if clock is not None:
             if _family(self.every[1]) != "day":
                 raise ValueError(f"a clock time is no point in steps of {self._every}; write a number of steps")
@@ -155,6 +175,12 @@ class Grid:
     def skipped(self, moment: datetime) -> bool:
         """Return whether the change of clocks skips a local time."""
         return self._offset(moment, 1) > self._offset(moment, 0)
+
+    def _lack(self, keys: str) -> str:
+        """Return how to mend a lack of dates."""
+        if self.uneven:
+            return f"parts of {self.uneven} have no fixed length, so choose other steps"
+        return f"give time: {{{keys}}}"
 
     @property
     def _length(self) -> int:

@@ -109,7 +109,7 @@ class _Terms:
         optional = (*REPLACED, *spread) if one_spread else ()
         also = ("shock",) if self.kind.takes_shock else ()
         before, varying = len(self.reader.faults), len(self.reader.made)
-        values = read_each(inner, self.kind.parameters, self.reader, also, optional)
+        values = read_each(inner, self.kind.parameters, self._reader_of_bodies(given), also, optional)
         if len(self.reader.made) - varying > _varying_in(values):
             self.reader.fault(inner, "a number in here cannot vary: it is not one that a path could have for itself")
         if one_spread and inner.is_map:
@@ -131,6 +131,13 @@ class _Terms:
             tree.place,
             Frozen(places),
         )
+
+    def _reader_of_bodies(self, given: Mapping[str, Tree]) -> Reading:
+        """Return the reader, of finer steps in the bodies where the kind cuts them."""
+        name = getattr(self.kind, "finer", "")
+        parts = given[name].value if name in given else 1
+        cuts = isinstance(parts, int) and not isinstance(parts, bool) and parts > 1
+        return self.reader.cut(parts) if cuts else self.reader
 
     def _bodies(self, values: dict[str, Any]) -> dict[str, tuple[Entry, ...]]:
         """Take the bodies out of the values, in order; of named ones (branches.calm) the names stay as a value."""

@@ -53,6 +53,7 @@ class Reader:
         self.subject: Parameter | None = None
         self.known: Known | None = None  # what may stand in place of numbers; None where nothing can vary
         self.made: list[Varying] = []  # what was read in place of numbers
+        self.parts = 1  # in how many a step is cut for the bodies that are read
 
     def fault(self, tree: Tree, message: str) -> None:
         """Report what is wrong at a tree; the same fault of an anchored text once."""
@@ -92,8 +93,17 @@ class Reader:
         other.known = known
         return other
 
+    def cut(self, parts: int) -> Reader:
+        """Return a reader of bodies that run on steps cut into so many parts."""
+        other = copy.copy(self)
+        other.parts = parts
+        return other
+
     def body(self, tree: Tree) -> tuple[Entry, ...]:
-        return read_body(tree, self.about(None))
+        reader = self.about(None)
+        if self.parts > 1:
+            reader.grid, reader.parts = self.grid and self.grid.cut(self.parts), 1
+        return read_body(tree, reader)
 
 
 def read_text(text: str, catalogue: Mapping[str, Any], laws: Mapping[str, Any], file: str | None = None) -> Spec:

@@ -97,6 +97,7 @@ class Term:
     outputs: ClassVar[tuple[str, ...]] = ()
     correlates: ClassVar[bool] = False  # whether its first draw may be named in `correlation`, as those of a noise may
     by_rows: ClassVar[tuple[str, ...]] = ()  # parameters that may be rows, one value a path, in `recurse`
+    finer: ClassVar[str] = ""  # the parameter that says in how many parts its body cuts a step; empty where none does
     burns_in: ClassVar[bool] = False  # whether `begin` reads its inputs from the first row on, a few rows at a time
     portable: ClassVar[bool] = True
     why_not_portable: ClassVar[str] = ""
@@ -220,6 +221,7 @@ class Node:
     place: Any = None
     entry: Any = None
     joint: Any = None
+    pace: int = 1  # its steps in one step of the spec
     hidden: frozenset[str] = field(default_factory=frozenset)
 
 

@@ -118,10 +118,10 @@ def deepest(graph: Graph) -> int:
     """The most steps before step 0 that any path is drawn from, looked for at the ends of the draws."""
     varied = graph.varied
     if varied is None or not varied.parameters:
-        return graph.depth
+        return max(graph.depth, graph.pace if graph.pace > 1 else 0)
     trials = [p.varying.law.trials() for p in varied.parameters.values()]
     ends = [{name: t[i] for name, t in zip(varied.parameters, trials, strict=True)} for i in (0, -1)]
-    return max(graph.depth, *(Graph(varied.at(values)).depth for values in ends))
+    return max(graph.depth, graph.pace, *(Graph(varied.at(values)).depth for values in ends))
 
 
 def varied_of(graph: Graph) -> Varied:

@@ -33,6 +33,7 @@ class Source:
     law: Any
     head: int = 0
     group: Group | None = None
+    pace: int = 1
 
     inputs = ()
 
@@ -63,10 +64,14 @@ class Graph:
         self._owners: dict[str, Node] = {}
         self._hidden: dict[tuple[int, str], Node] = {}
         self._count = 0
+        self._paces: dict[int, int] = {}
+        for owner in (*spec.series.values(), *spec.shared.values()):
+            self._paces.update(_paced(owner.of, 1))
         self.series = {name: self._owner(name) for name in spec.series}
         for name in spec.shared:
             self._owner(name)
         self._correlate()
+        self._refuse_uneven()
         self._plan()
 
     def resolve(self, name: str) -> Node:
@@ -80,6 +85,8 @@ class Graph:
         if not rest:
             return self._owner(owner)
         entry = self._entry_named(owner, rest[0], name)
+        if self._paces[id(entry)] > 1:
+            raise KeyError(f"{name} has {self._paces[id(entry)]} steps in one of the spec; name what is made of it")
         node = self._entry(entry, owner)
         if len(rest) == 1:
             return node
@@ -117,12 +124,19 @@ class Graph:
                 node = self._entry(entry, owner)
                 while isinstance(node.term, Scaled):
                     node = node.inputs[0]
+                if node.pace > 1:
+                    continue
                 yield f"{owner}.{entry.label or entry.kind}", node
 
     @property
     def depth(self) -> int:
         """The most steps before step 0 that anything must be drawn from; bounds the paths drawn at a time."""
         return max((node.head for node in self.order([*self._owners.values()])), default=0)
+
+    @property
+    def pace(self) -> int:
+        """The most steps that anything has in one step of the spec."""
+        return max(self._paces.values(), default=1)
 
     @property
     def portable(self) -> tuple[bool, str]:
@@ -146,19 +160,20 @@ class Graph:
 
     def _body(self, entries: tuple[Entry, ...], owner: str, place: Place) -> Node:
         nodes = [self._entry(entry, owner) for entry in entries]
-        return nodes[0] if len(nodes) == 1 else self._node(Sum({}), owner, nodes, place)
+        return nodes[0] if len(nodes) == 1 else self._node(Sum({}), owner, nodes, place, nodes[0].pace)
 
     def _entry(self, entry: Entry, owner: str) -> Node:
         if id(entry) not in self._entries:
             node = self._unscaled(entry, owner)
             if entry.times != 1.0 or self._factors:
-                node = self._node(Scaled(entry.times), node.name, [node], entry.place)
+                node = self._node(Scaled(entry.times), node.name, [node], entry.place, node.pace)
             self._entries[id(entry)] = node
         return self._entries[id(entry)]
 
     def _unscaled(self, entry: Entry, owner: str) -> Node:
+        pace = self._paces[id(entry)]
         if entry.kind == "use":
-            return self.resolve(entry.values["name"])
+            return self._used(entry, pace)
         kind = catalogue()[entry.kind]
         term = kind(entry.values)
         name = f"{owner}.{entry.label or entry.kind}"
@@ -172,37 +187,48 @@ class Graph:
             noise = self._shock(entry, term, owner)
             term.shock_scale = noise.term.scale()
             inputs.append(noise)
-        inputs += [self._source(draw, owner, entry.label, name) for draw in term.draws()]
-        node = self._node(term, name, inputs, entry.place)
-        misfit = term.misfit(inputs) or self._too_long(term)
+        inputs += [self._source(draw, owner, entry.label, name, pace) for draw in term.draws()]
+        node = self._node(term, name, inputs, entry.place, pace)
+        misfit = term.misfit(inputs) or self._too_long(term, pace)
         if misfit:
             raise SpecError((Fault(entry.place, misfit),))
         if kind.takes_shock:
             self.filters[id(inputs[-1])] = node
         return node
 
-    def _too_long(self, term: Term) -> str | None:
-        if term.longest is None or self.spec.time.steps <= term.longest:
+    def _used(self, entry: Entry, pace: int) -> Node:
+        if pace > 1:
+            message = "what is used runs at the steps of the spec; write its terms here, or share the whole aggregate"
+            raise SpecError((Fault(entry.place, message),))
+        try:
+            return self.resolve(entry.values["name"])
+        except KeyError as error:
+            raise SpecError((Fault(entry.place, error.args[0]),)) from None
+
+    def _too_long(self, term: Term, pace: int) -> str | None:
+        steps = self.spec.time.steps * pace
+        if term.longest is None or steps <= term.longest:
             return None
-        return f"expected at most {term.longest:,} steps with {term.kind}, got {self.spec.time.steps:,}; ask for fewer"
+        return f"expected at most {term.longest:,} steps with {term.kind}, got {steps:,}; ask for fewer"
 
     def _shock(self, entry: Entry, term: Term, owner: str) -> Node:
         if entry.shock is not None:
             return self._unscaled(entry.shock, owner)
         noise = WhiteNoise({"sd": term.shock_sd(), "law": entry.values["law"]})
         name = f"{owner}.{entry.label}"
-        sources = [self._source(draw, owner, entry.label, name) for draw in noise.draws()]
-        return self._node(noise, name, sources, entry.place)
+        pace = self._paces[id(entry)]
+        sources = [self._source(draw, owner, entry.label, name, pace) for draw in noise.draws()]
+        return self._node(noise, name, sources, entry.place, pace)
 
-    def _source(self, draw: Any, owner: str, label: str, name: str) -> Source:
-        source = Source(name, Stream(self.spec.seed, self._stream(owner), label, draw.role), draw.law)
+    def _source(self, draw: Any, owner: str, label: str, name: str, pace: int) -> Source:
+        source = Source(name, Stream(self.spec.seed, self._stream(owner), label, draw.role), draw.law, pace=pace)
         self.sources.append(source)
         return source
 
-    def _node(self, term: Term, name: str, inputs: list[Any], place: Place) -> Node:
+    def _node(self, term: Term, name: str, inputs: list[Any], place: Place, pace: int = 1) -> Node:
         term.address, term.arity = name, len(inputs)
         self._count += 1
-        return Node(f"{name}#{self._count}", name, term, tuple(inputs), place=place)
+        return Node(f"{name}#{self._count}", name, term, tuple(inputs), place=place, pace=pace)
 
     def _entry_named(self, owner: str, label: str, name: str) -> Entry:
         body = self.spec.series.get(owner) or self.spec.shared[owner]
@@ -233,6 +259,13 @@ class Graph:
             self.groups.append(group)
             for source in group.sources:
                 source.group = group
+
+    def _refuse_uneven(self) -> None:
+        for group in self.groups:
+            if len({source.pace for source in group.sources}) > 1:
+                names = " and ".join(source.name for source in group.sources)
+                message = f"{names} have steps of different length; correlate what runs at the same pace"
+                raise SpecError((Fault(next(iter(self.spec.series.values())).place, message),))
 
     def _plan(self) -> None:
         """Decide which terms start jointly, and how far back everything must be drawn."""
@@ -330,6 +363,18 @@ def _stationary(node: Node) -> Any:
 
 def _is_noise(node: Any) -> bool:
     return isinstance(node, Node) and node.term.noise
+
+
+def _paced(entries: tuple[Entry, ...], pace: int) -> Iterator[tuple[int, int]]:
+    """Each entry's id, and how many steps it has in one of the spec."""
+    for entry in entries:
+        yield id(entry), pace
+        finer = getattr(catalogue().get(entry.kind), "finer", "")
+        within = pace * int(entry.values[finer]) if finer else pace
+        if entry.shock is not None:
+            yield from _paced((entry.shock,), pace)
+        for body in entry.bodies.values():
+            yield from _paced(body, within)
 
 
 def _walk(entries: tuple[Entry, ...]) -> Iterator[Entry]:

@@ -12,7 +12,7 @@ import numpy as np
 
 from procgen.terms.base import Ahead, Array, Node, Term, Unknown
 from procgen.terms.graph import Graph, Source
-from procgen.terms.run import Run
+from procgen.terms.run import Run, within
 
 
 def sources_below(graph: Graph, node: Any) -> list[Source]:
@@ -88,13 +88,14 @@ def forecast(run: Run, series: str, steps: int) -> Ahead | Unknown:
     if _shared(run.graph, node):
         return Unknown(f"{series} reads the same shocks in more than one place: its parts' variances do not add")
     for part in run.graph.order([node]):
+        own = within(at, part.pace)
         if isinstance(part, Source):
-            answers[id(part)] = Ahead(np.zeros((steps, 1)), np.ones((steps, 1)))
+            answers[id(part)] = Ahead(np.zeros((len(own), 1)), np.ones((len(own), 1)))
             continue
         inputs = [answers[id(below)] for below in part.inputs]
         refused = [answer for answer in inputs if isinstance(answer, Unknown)]
         state = run.state_of(part)
-        answers[id(part)] = refused[0] if refused else part.term.ahead(at, state, *inputs)
+        answers[id(part)] = refused[0] if refused else part.term.ahead(own, state, *inputs)
     return answers[id(node)]
 
 

@@ -43,6 +43,10 @@ class Run:
         """The next `steps` steps of every series: name to float64 (steps, paths)."""
         if not self._states:
             self._begin()
+        most = max(LARGEST // (self.graph.pace * self.paths), 1)
+        if self.graph.pace > 1 and steps > most:
+            parts = [self.tile(min(most, steps - first)) for first in range(0, steps, most)]
+            return {name: np.concatenate([part[name] for part in parts]) for name in self.columns}
         at = np.arange(self.step, self.step + steps)
         values, self._states = self._advance(self._order, at)
         self.step += steps
@@ -68,11 +72,15 @@ class Run:
 
     # forward
 
-    def _advance(self, order: Sequence[Any], at: Array) -> tuple[dict[int, Array], dict[str, State]]:
+    def _advance(
+        self, order: Sequence[Any], steps: Array, pace: int = 1
+    ) -> tuple[dict[int, Array], dict[str, State]]:
+        """Values at `steps` of what has this pace, and at as many more of what has a faster one."""
         values: dict[int, Any] = {}
         hidden: dict[int, dict[str, Array]] = {}
         states: dict[str, State] = {}
         for node in order:
+            at = within(steps, node.pace // pace)
             if isinstance(node, Source):
                 if id(node) not in values:
                     self._draw(node, int(at[0]), len(at), values)
@@ -151,7 +159,7 @@ class Run:
         return np.zeros((0, 1)) if rows is None else rows
 
     def _peek(self, node: Any) -> Array:
-        values, _ = self._advance(self.graph.order([node]), np.array([0]))
+        values, _ = self._advance(self.graph.order([node]), np.array([0]), node.pace)
         return values[id(node)]
 
     def _joint_rows(self, node: Node) -> tuple[Array, Array]:
@@ -183,6 +191,14 @@ class Run:
         while not isinstance(node, Source):
             node = node.inputs[-1]
         return node
+
+
+LARGEST = 1 << 18  # values that a term with finer steps has at once
+
+
+def within(steps: Array, times: int) -> Array:
+    """The finer steps, so many to one, that these steps in a row are made of."""
+    return steps if times == 1 else np.arange(steps[0] * times, (steps[-1] + 1) * times)
 
 
 class _Past:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field, replace
+from math import lcm
 from typing import Any
 
 import numpy as np
@@ -17,7 +18,7 @@ from procgen.theory.known import Known
 from procgen.theory.lattice import Rounded
 from procgen.theory.laws import is_gaussian
 from procgen.theory.linear import At, Base, Linear
-from procgen.theory.processes import Chain, Curved, Held, Hinged, Process, mean_at
+from procgen.theory.processes import Chain, Curved, Held, Hinged, Process, Seen, mean_at
 from procgen.theory.sources import GARCH, IID, PROCESS, Source, Space, roots
 from procgen.theory.stated import Stating
 from procgen.theory.unknown import Unknown
@@ -178,6 +179,26 @@ class Axis(Volatile, Stating):
             path = known.observed(("held", self.name), path.at, self.horizon, self.name, settles=x.mean_path.settles)
         return self.process(Held(self.name, x, step_of, says), path) if x.sources else Expression(self.space, path)
 
+    def every(self, x: Expression, k: int, first: int) -> Expression:
+        """x, whose steps are k to one, at the step k t + first."""
+
+        def step_of(t: np.ndarray) -> np.ndarray:
+            return k * np.asarray(t, np.int64) + first
+
+        periods = x.mean_path.periods if not x.terms else None
+        cycle = None if periods is None else frozenset(_coarser(p, k) for p in periods)
+        note = "; ".join(x.mean_path.notes) or f"the mean moves in {self.name}"
+        path = known.whole(("every", self.name, k), lambda t: mean_at(x, step_of(t)), cycle, note)
+        if not x.terms and all(s.centred for s in x.sources):
+            path = known.whole(("every", self.name, k), lambda t: x.mean_path.at(step_of(t)), cycle, note)
+            if x.mean_path.value is not None or cycle == {1.0}:
+                path = known.constant(float(x.mean_path.at(np.array([first]))[0]))
+            elif cycle is None:
+                path = known.observed(("every", self.name), path.at, self.horizon // k, self.name)
+        elif judge(x).stationary and x.mean_path.value is not None:
+            path = known.constant(float(mean_at(x, np.array([first]))[0]))
+        return self.process(Seen(self.name, x, step_of), path) if x.sources else Expression(self.space, path)
+
     def hinge(self, x: Expression) -> Expression:
         """max(x, 0): closed where x is known or Gaussian.
 
@@ -255,6 +276,11 @@ class Axis(Volatile, Stating):
         if mean.level or mean.slope or any(piece.key[0] != "past" for piece in mean.pieces):
             raise Unknown("a filter that starts from a given past, of a noise with a mean")
         return _forecast(self.name, phi, theta, tuple(before_x), tuple(before_shocks or ()))
+
+
+def _coarser(period: float, k: int) -> float:
+    """A period of a pattern that is read every k steps, in readings."""
+    return lcm(int(period), k) / k if float(period).is_integer() else period / k
 
 
 def _bent(v: np.ndarray) -> np.ndarray:

@@ -109,6 +109,21 @@ class Held(Process):
         return Affine(law, -float(law.mean()), 1.0)
 
 
+class Seen(Held):
+    """An expression on finer steps, read at some of them; jointly Gaussian where it is."""
+
+    def __init__(self, name: str, body: Any, step_of: Callable[[Steps], Steps]):
+        super().__init__(name, body, step_of, ())
+        if not body.terms:  # how its mean moves is no part of how it varies
+            self.ingredients = (_expression(body.space, body.linear),)
+
+    @property
+    def gaussian(self) -> bool:  # type: ignore[override]
+        from procgen.theory.laws import is_gaussian
+
+        return is_gaussian(self.body)
+
+
 class Hinged(Process):
     """max(x, 0) of a Gaussian x, less its mean.
 

@@ -133,7 +133,7 @@ def theory(spec: Any, graph: Any = None) -> Theory:
         for j in range(i)
         if matrix[i][j]
     }
-    axis = Axis(spec.time.steps, correlation)
+    axis = Axis(spec.time.steps * graph.pace, correlation)
     memo: dict[int, Expression] = {}
     series = {name: SeriesTheory(name, _moments(axis, graph.series[name], memo)) for name in spec.series}
     return Theory(series, tuple(names), axis, graph)

@@ -187,6 +187,13 @@ FAMILIES: Mapping[str, Any] = {
             "d": [{"sum": [{"constant": 5}, {"hold": {"of": [{"exp": _AR}], "every": 2}}]}],
         }
     },
+    "finer steps": {
+        "series": {
+            "a": [{"aggregate": {"of": [{"ar": {"phi": 0.9, "sd": 1}}], "over": 4}}],
+            "b": [{"aggregate": {"of": [{"garch": {"sd": 1, "alpha": 0.1, "beta": 0.7}}], "over": 3, "by": "mean"}}],
+            "c": [{"subsample": {"of": [{"random_walk": {"sd": 0.5}}], "over": 5}}],
+        }
+    },
     "schedule": [
         {"schedule": {"of": [{"ar": {"phi": 0.8, "sd": 1}}], "until": 9, "then": [{"white_noise": {"sd": 2}}]}}
     ],
