@@ -1,0 +1,273 @@
+"""Rendering against what people would use instead: scripts by hand, statsmodels and arch.
+
+    python -m tests.bench.bench_against [--quick] [--rounds 5] [--only CASE,…] [--shapes 65536x1000,…] [--dir DIR]
+
+To Parquet, whole processes, rounds interleaved, medians of the ratios round by round:
+
+- `by hand`: NumPy draws and filters all paths at once, pandas writes the frame with `to_parquet`;
+- `expert`: the same filters on blocks of about a million rows with NumPy's fastest generator, written by pyarrow
+  without dictionary, statistics or compression, from memory that is never copied;
+- `procgen`: `procgen render` with two workers, digests included.
+
+In memory, the call alone: `statsmodels` (`arma_generate_sample`; `simulate` of its state space model) and `arch`
+(`simulate`) against `render(out=None)`. What is drawn path by path there is timed on few paths and multiplied; the
+table says so.
+"""
+
+from __future__ import annotations
+
+import argparse
+import importlib.util
+import os
+import platform
+import statistics
+import subprocess
+import sys
+from pathlib import Path
+
+from tests.bench.bench_walk import Run, measure, ratio
+
+SHAPES = ((1, 1_000_000), (100, 100_000), (65_536, 1_000), (1_000_000, 50))
+MOST = 70_000_000  # values of a case; of 20 series there are fewer paths
+SPECS = {
+    "noise": "{x: [{white_noise: {sd: 1}}]}",
+    "walk": "{x: [{random_walk: {sd: 1}}]}",
+    "arma": "{x: [{arma: {phi: [0.75, -0.5], theta: 0.3, sd: 1}}]}",
+    "garch": "{x: [{garch: {omega: 0.05, alpha: 0.1, beta: 0.85}}]}",
+    "sum of 5": "{x: [{constant: 80}, {seasonal: {period: 24, harmonics: [{amplitude: 12, peak: 18}]}}, "
+    "{ar: {phi: 0.8, sd: 3}}, {random_walk: {sd: 0.1}}, {garch: {omega: 0.05, alpha: 0.1, beta: 0.85}}]}",
+    "20 series": "{" + ", ".join(f"x{k}: [{{ar: {{phi: 0.5, sd: 1}}}}]" for k in range(20)) + "}",
+}
+CORRELATION = f"correlation:\n  - {{within: [{', '.join(f'x{k}.ar' for k in range(20))}], value: 0.35}}\n"
+# Each draws a mapping of (paths, steps) arrays with 500 steps of burn-in where the process has a memory.
+DRAW = '''\
+import numpy as np
+from scipy.signal import lfilter
+
+BURN = 500
+
+
+def normal(rng, paths, steps):
+    return rng.standard_normal((paths, steps))
+
+
+def arma(rng, paths, steps, phi, theta=()):
+    shocks = normal(rng, paths, BURN + steps)
+    return lfilter([1.0, *theta], [1.0, *(-c for c in phi)], shocks, axis=1)[:, BURN:]
+
+
+def garch(rng, paths, steps):
+    z = normal(rng, BURN + steps, paths)
+    h = np.full(paths, 1.0)
+    for row in z:
+        row *= np.sqrt(h)
+        h = 0.05 + 0.1 * row * row + 0.85 * h
+    return z[BURN:].T
+
+
+def draw(case, rng, paths, steps):
+    if case == "noise":
+        return {"x": normal(rng, paths, steps)}
+    if case == "walk":
+        x = normal(rng, paths, steps)
+        return {"x": np.cumsum(x, axis=1, out=x)}
+    if case == "arma":
+        return {"x": arma(rng, paths, steps, (0.75, -0.5), (0.3,))}
+    if case == "garch":
+        return {"x": garch(rng, paths, steps)}
+    if case == "sum of 5":
+        x = 3.0 * arma(rng, paths, steps, (0.8,))
+        x += 80.0 + 12.0 * np.cos(2 * np.pi * (np.arange(steps) - 18) / 24)
+        walk = normal(rng, paths, steps)
+        x += 0.1 * np.cumsum(walk, axis=1, out=walk)
+        x += garch(rng, paths, steps)
+        return {"x": x}
+    root = np.linalg.cholesky(0.35 + 0.65 * np.eye(20))
+    shocks = rng.standard_normal((20, paths, BURN + steps))
+    shocks = np.tensordot(root, shocks, axes=1)
+    return {f"x{k}": lfilter([1.0], [1.0, -0.5], shocks[k], axis=1)[:, BURN:] for k in range(20)}
+'''
+BY_HAND = """\
+import pandas as pd
+
+series = draw({case!r}, np.random.default_rng(1), {paths}, {steps})
+frame = pd.DataFrame({{"path": np.repeat(np.arange({paths}), {steps}), "step": np.tile(np.arange({steps}), {paths})}})
+for name, values in series.items():
+    frame[name] = values.ravel()
+frame.to_parquet("{out}/by-hand.parquet")
+"""
+EXPERT = """\
+import pyarrow as pa
+import pyarrow.parquet as pq
+
+rng = np.random.Generator(np.random.SFC64(1))
+names = ["x"] if {case!r} != "20 series" else [f"x{{k}}" for k in range(20)]
+schema = pa.schema(
+    [pa.field("path", pa.int32(), nullable=False), pa.field("step", pa.int32(), nullable=False)]
+    + [pa.field(name, pa.float64(), nullable=False) for name in names]
+)
+
+
+def column(values, kind):
+    flat = np.ascontiguousarray(values).reshape(-1)
+    return pa.Array.from_buffers(kind, len(flat), [None, pa.py_buffer(flat)])
+
+
+options = dict(compression="none", use_dictionary=False, write_statistics=False)
+with pq.ParquetWriter("{out}/expert.parquet", schema, **options) as writer:
+    width = max((1 << 20) // {steps}, 1)
+    for first in range(0, {paths}, width):
+        count = min(width, {paths} - first)
+        series = draw({case!r}, rng, count, {steps})
+        path = np.repeat(np.arange(first, first + count, dtype=np.int32), {steps})
+        step = np.tile(np.arange({steps}, dtype=np.int32), count)
+        columns = [column(path, pa.int32()), column(step, pa.int32())]
+        columns += [column(values, pa.float64()) for values in series.values()]
+        writer.write_table(pa.table(columns, schema=schema), row_group_size=1 << 20)
+"""
+SPEC = "procgen: 1\nseed: 1\npaths: {paths}\ntime: {{steps: {steps}}}\nseries: {series}\n"
+# Seconds of each call, one a line, after one call of the same on little.
+IN_MEMORY = """\
+import sys
+import time
+import warnings
+
+import numpy as np
+
+warnings.simplefilter("ignore")
+paths, steps, few = {paths}, {steps}, {few}
+
+
+def seconds(call, times):
+    call(1, 100)
+    began = time.perf_counter()
+    call(few if times > 1 else paths, steps)
+    return (time.perf_counter() - began) * times
+
+
+def ours(paths, steps):
+    import procgen as pg
+
+    pg.render({spec!r}, paths=paths, steps=steps)
+
+
+def generated(paths, steps):
+    from statsmodels.tsa.arima_process import arma_generate_sample
+
+    arma_generate_sample([1, -0.75, 0.5], [1, 0.3], (steps, paths), burnin=500, axis=0)
+
+
+def state_space(paths, steps):
+    from statsmodels.tsa.statespace.sarimax import SARIMAX
+
+    model = SARIMAX(np.zeros(10), order=(2, 0, 1))
+    for _ in range(paths):
+        model.simulate([0.75, -0.5, 0.3, 1.0], steps)
+
+
+def arch(paths, steps):
+    from arch.univariate import ZeroMean, GARCH
+
+    model = ZeroMean(volatility=GARCH())
+    for _ in range(paths):
+        model.simulate([0.05, 0.1, 0.85], steps)
+
+
+print(seconds({call}, {times}))
+"""
+
+
+def main() -> None:
+    args = arguments()
+    args.dir = args.dir.absolute()
+    args.dir.mkdir(parents=True, exist_ok=True)
+    print(f"{os.cpu_count()} processors, Python {platform.python_version()}, median of {args.rounds} rounds")
+    print(f"extra speed (numba) {'present' if importlib.util.find_spec('numba') else 'absent'}\n")
+    print("| case | shape | procgen s | by hand s | expert s | by hand / procgen | expert / procgen | peak MB |")
+    print("| --- | --- | --- | --- | --- | --- | --- | --- |")
+    for case in args.only:
+        for shape in args.shapes:
+            print(written(case, few_paths(case, shape), args.rounds, args.dir), flush=True)
+    print("\n| case | shape | against | procgen s | theirs s | theirs / procgen |")
+    print("| --- | --- | --- | --- | --- | --- |")
+    for case, call in (("arma", "generated"), ("arma", "state_space"), ("garch", "arch")):
+        for shape in args.shapes if case in args.only else ():
+            print(in_memory(case, call, shape, args.rounds, args.dir), flush=True)
+
+
+def arguments() -> argparse.Namespace:
+    parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
+    parser.add_argument("--quick", action="store_true", help="small shapes, once: does it run?")
+    parser.add_argument("--rounds", type=int, default=5)
+    parser.add_argument("--only", type=lambda text: text.split(","), default=list(SPECS))
+    parser.add_argument("--shapes", type=lambda text: [shape_of(each) for each in text.split(",")], default=SHAPES)
+    parser.add_argument("--dir", type=Path, default=Path("build/bench"))
+    args = parser.parse_args()
+    if args.quick:
+        args.rounds, args.shapes = 1, ((1, 2_000), (64, 50))
+    return args
+
+
+def shape_of(text: str) -> tuple[int, int]:
+    paths, steps = text.split("x")
+    return int(paths), int(steps)
+
+
+def few_paths(case: str, shape: tuple[int, int]) -> tuple[int, int]:
+    """Fewer paths, or steps of the one path, where 20 series of that shape would be too much for the machine."""
+    paths, steps = shape
+    if case == "20 series" and 20 * paths * steps > MOST:
+        return max(paths // 20, 1), steps
+    return shape
+
+
+def spec_file(folder: Path, case: str, shape: tuple[int, int]) -> Path:
+    file = folder / f"{case.replace(' ', '-')}.yaml"
+    text = SPEC.format(paths=shape[0], steps=shape[1], series=SPECS[case])
+    file.write_text(text + (CORRELATION if case == "20 series" else ""))
+    return file
+
+
+def written(case: str, shape: tuple[int, int], rounds: int, folder: Path) -> str:
+    """A row of the first table."""
+    out = folder / "out"
+    spec = spec_file(folder, case, shape)
+    commands = {"procgen": ["-m", "procgen", "render", str(spec), "-o", str(out), "--workers", "2"]}
+    for name, script in {"by hand": BY_HAND, "expert": EXPERT}.items():
+        file = folder / f"{name.replace(' ', '_')}.py"
+        file.write_text(DRAW + "\n\n" + script.format(case=case, paths=shape[0], steps=shape[1], out=out))
+        commands[name] = [str(file)]
+    seen: dict[str, list[Run]] = {name: [] for name in commands}
+    for _ in range(rounds):
+        for name, command in commands.items():
+            seen[name].append(measure(command, out))
+    times = [f"{statistics.median(run.seconds for run in runs):.2f}" for runs in seen.values()]
+    ratios = [f"{ratio(seen[name], seen['procgen']):.2f}" for name in ("by hand", "expert")]
+    peaks = " / ".join(f"{max(run.peak for run in runs):.0f}" for runs in seen.values())
+    return f"| {case} | {shape[0]:,} × {shape[1]:,} | {' | '.join(times + ratios)} | {peaks} |"
+
+
+def in_memory(case: str, call: str, shape: tuple[int, int], rounds: int, folder: Path) -> str:
+    """A row of the second table."""
+    paths, steps = shape
+    few = paths if call == "generated" else max(min(paths, 200_000 // steps), 1)
+    times = paths / few if few < paths else 1
+    spec = str(spec_file(folder, case, shape))
+    ours, theirs = [], []
+    for _ in range(rounds):
+        ours.append(called(IN_MEMORY.format(paths=paths, steps=steps, few=few, spec=spec, call="ours", times=1)))
+        theirs.append(called(IN_MEMORY.format(paths=paths, steps=steps, few=few, spec=spec, call=call, times=times)))
+    name = {"generated": "arma_generate_sample", "state_space": "SARIMAX.simulate", "arch": "GARCH.simulate"}[call]
+    scaled = f", {few:,} of {paths:,} paths timed" if times > 1 else ""
+    quotient = statistics.median(b / a for a, b in zip(ours, theirs, strict=True))
+    middle = f"{statistics.median(ours):.3f} | {statistics.median(theirs):.3f}"
+    return f"| {case} | {paths:,} × {steps:,} | {name}{scaled} | {middle} | {quotient:.2f} |"
+
+
+def called(script: str) -> float:
+    found = subprocess.run([sys.executable, "-c", script], capture_output=True, text=True, check=True)
+    return float(found.stdout)
+
+
+if __name__ == "__main__":
+    main()
