@@ -39,10 +39,22 @@ def common(
     pass
 
 
+def roles_of(text: str) -> dict[str, str]:
+    """Roles of columns and their names from `id=shop,time=week`."""
+    pairs = [part.partition("=") for part in text.split(",")]
+    if not all(role.strip() and name.strip() for role, _, name in pairs):
+        raise typer.BadParameter(f"expected ROLE=NAME, such as id=shop,time=week, got {text!r}")
+    return {role.strip(): name.strip() for role, _, name in pairs}
+
+
 SpecFile = Annotated[Path, typer.Argument(metavar="SPEC", help="The spec, a YAML file.", show_default=False)]
 Scheduler = Annotated[
     str | None,
     typer.Option(metavar="local|ADDRESS", help="Work on a Dask cluster: the one there, or one started here."),
+]
+Columns = Annotated[
+    dict | None,
+    typer.Option(parser=roles_of, metavar="id=NAME,…", help="Other names for id, path, step, time and value."),
 ]
 Json = Annotated[bool, typer.Option("--json", help="Print JSON instead of text.")]
 
@@ -101,7 +113,18 @@ def render(
     workers: Annotated[
         int | None, typer.Option(metavar="N", help="Processes; what the size repays when absent.", min=1)
     ] = None,
-    layout: Annotated[str, typer.Option(metavar="long", help="Layout of the files.")] = "long",
+    layout: Annotated[
+        str,
+        typer.Option(
+            metavar="long|panel|wide|nested",
+            help="A row of a file is a path and step, an observation, a step, or a path.",
+        ),
+    ] = "long",
+    columns: Columns = None,
+    partition: Annotated[
+        str | None,
+        typer.Option(metavar="series|paths", help="What a file holds: one series, or all series of some paths."),
+    ] = None,
     reveal: Annotated[
         str | None,
         typer.Option(metavar="all|NAME,…", help="Terms and hidden outputs to write beside the series."),
@@ -127,6 +150,8 @@ def render(
             seed=seed,
             workers=workers,
             layout=layout,
+            columns=columns,
+            partition=partition,
             reveal=reveal,
             resume=resume,
             overwrite=overwrite,

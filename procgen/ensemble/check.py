@@ -10,7 +10,7 @@ from pathlib import Path
 import numpy as np
 
 from procgen.chance.streams import STREAM_VERSION
-from procgen.ensemble import digest, parquet
+from procgen.ensemble import digest, files, parquet
 from procgen.ensemble.columns import store
 from procgen.ensemble.draw import Drawer, empty
 from procgen.ensemble.ensemble import Blocks, Ensemble, OnDisk
@@ -198,7 +198,7 @@ class Reader:
                 damages += self._compare(part, nodes)
                 found.append((part.block, nodes))
             except EnsembleError as error:
-                damages.append(Damage(part.file, str(error)))
+                damages += [Damage(part.file, str(error)), *self._identity(part)]
             rows += part.block.rows
             if progress is not None:
                 progress(rows, self.manifest.whole.rows)
@@ -212,9 +212,12 @@ class Reader:
         return {name: each.nodes(self.manifest.whole) for name, each in leaves.items()}
 
     def _read(self, part: PartRecord, first: int = 0, end: int | None = None) -> Blocks:
-        if not (self.path / part.file).exists():
-            raise EnsembleError("the part is missing; draw it again with --resume")
-        yield from parquet.read(self.path / part.file, part.block, self.columns, self.stamps, first, end)
+        file = files.missing(Folder(self.path), part.file, self.manifest.layout, self.columns)
+        if file is not None:
+            what = "the part" if file == part.file else file
+            raise EnsembleError(f"{what} is missing; draw it again with --resume")
+        layout = self.manifest.layout
+        yield from parquet.read(self.path, part.file, part.block, layout, self.columns, self.stamps, first, end)
 
     def _compare(self, part: PartRecord, nodes: Mapping[str, Mapping[digest.Key, bytes]]) -> list[Damage]:
         """At most one damage: the first series and rectangle whose values are not those that were written."""
@@ -232,20 +235,24 @@ class Reader:
 
     def _identity(self, part: PartRecord) -> list[Damage]:
         """Whether a part says that it is of another ensemble; of a manifest that was changed, that is its fault."""
-        try:
-            said = parquet.footer(self.path / part.file)[0]
-        except EnsembleError:  # written again by another program, with the same values
-            return []
-        found = other_than_part(self.manifest.identity, said)
-        self.others = self.others or found
-        return [] if self.manifest.changed else [Damage(part.file, sentence) for sentence in found[:1]]
+        for name in dict.fromkeys([*self.manifest.layout.files(part.file, self.columns), part.file]):
+            try:
+                said = parquet.footer(self.path / name)[0]
+            except EnsembleError:  # not there, or written again by another program with the same values
+                continue
+            found = other_than_part(self.manifest.identity, said)
+            if found:
+                self.others = self.others or found
+                return [] if self.manifest.changed else [Damage(part.file, sentence) for sentence in found[:1]]
+        return []
 
     def _written(self, part: PartRecord) -> Mapping[str, str]:
-        """The nodes in the part's own footer, nothing when they are not the ones the manifest was made of."""
+        """The nodes in the part's own footers, nothing when they are not the ones the manifest was made of."""
         try:
-            stored = parquet.footer(self.path / part.file)[1]["stored"]
+            found = files.footers(Folder(self.path), part.file, self.manifest.layout, self.columns)
+            stored = files.together([nodes for _, _, nodes in found])["stored"]
             return stored if node(stored) == part.node else {}
-        except (EnsembleError, KeyError, TypeError):
+        except (EnsembleError, KeyError, TypeError, AttributeError):
             return {}
 
     # drawing again

@@ -9,11 +9,13 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from procgen.ensemble import digest, parquet, revealed
+from procgen.ensemble import digest, files, parquet, revealed
 from procgen.ensemble.columns import Column, as_float
 from procgen.ensemble.errors import EnsembleError
+from procgen.ensemble.forms import form
+from procgen.ensemble.layouts import Layout
 from procgen.ensemble.manifest import Manifest, bytes_text
-from procgen.ensemble.plan import Block
+from procgen.ensemble.plan import GROUP_ROWS, Block, cut
 from procgen.ensemble.seal import contradictions, refuse_changed, refuse_version
 from procgen.ensemble.source import read_spec
 from procgen.ensemble.store import MANIFEST, PLAN, Folder, folder_path
@@ -136,10 +138,8 @@ class Ensemble:
         """A table of the long layout: path, step, time (where the spec has a start), then the columns."""
         import pyarrow as pa
 
-        schema = parquet.schema(self.columns, self._stamps is not None)
-        index = parquet.Index(self._stamps)
-        tables = [parquet.table(schema, index, self.columns, block, values) for block, values in self.stored()]
-        return pa.concat_tables(tables)
+        rows = form(Layout(), self.columns, self._stamps, self.whole)
+        return pa.concat_tables([rows.table(block, self.columns, values) for block, values in self.stored()])
 
     def to_pandas(self) -> pd.DataFrame:
         """A frame of the long layout, as `to_arrow` gives it."""
@@ -183,7 +183,7 @@ class Memory(Ensemble):
         first = self.whole.first_path if first_path is None else first_path
         end = self.whole.end_path if end_path is None else end_path
         wanted = Block(first, end - first, self.whole.first_step, self.whole.steps)
-        for block in parquet.cut(wanted, parquet.GROUP_ROWS):
+        for block in cut(wanted, GROUP_ROWS):
             rows = slice(block.first_path - self.whole.first_path, block.end_path - self.whole.first_path)
             steps = slice(block.first_step - self.whole.first_step, block.end_step - self.whole.first_step)
             yield block, {name: values[rows, steps] for name, values in self._values.items()}
@@ -215,10 +215,12 @@ class OnDisk(Ensemble):
     ) -> Blocks:
         first = self.whole.first_path if first_path is None else first_path
         end = self.whole.end_path if end_path is None else end_path
-        columns = [column for column in self.columns if names is None or column.name in names]
+        stamps, layout = self._stamps, self.manifest.layout
         for part in self.manifest.parts:
             if part.block.end_path > first and part.block.first_path < end:
-                yield from parquet.read(self.path / part.file, part.block, columns, self._stamps, first, end)
+                yield from parquet.read(
+                    self.path, part.file, part.block, layout, self.columns, stamps, first, end, names
+                )
 
 
 def open_ensemble(path: str | Path) -> OnDisk:
@@ -240,6 +242,5 @@ def open_ensemble(path: str | Path) -> OnDisk:
     refuse_changed(manifest, folder.path / MANIFEST)
     refuse_version(manifest.identity, path)
     for part in manifest.parts:
-        if folder.size(part.file) < 0:
-            raise EnsembleError(f"{folder.path / part.file} is missing; draw it again with --resume")
+        files.refuse_missing(folder, part.file, manifest.layout, manifest.columns)
     return OnDisk(folder.path, manifest)

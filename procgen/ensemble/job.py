@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import shutil
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -16,6 +16,7 @@ from procgen.ensemble.draw import Drawer, empty
 from procgen.ensemble.engines import Engine, Progress
 from procgen.ensemble.ensemble import Ensemble, Memory, OnDisk
 from procgen.ensemble.errors import EnsembleError
+from procgen.ensemble.layouts import Layout
 from procgen.ensemble.manifest import Manifest, bytes_text
 from procgen.ensemble.part import WORK, Task, row_bytes
 from procgen.ensemble.plan import Block, Chain, batches, chains, narrow_steps
@@ -24,7 +25,6 @@ from procgen.ensemble.source import FACTORY, Source, open_source, remember, reve
 from procgen.ensemble.store import MANIFEST, Folder, folder_path
 from procgen.terms.given import spec_of
 
-LAYOUTS = ("long",)
 MOST = 2**48  # paths, and steps: far beyond what can be stored, and safe in every int64
 
 
@@ -41,6 +41,8 @@ def render(
     resume: bool = False,
     overwrite: bool = False,
     layout: str = "long",
+    partition: str | None = None,
+    columns: Mapping[str, str] | None = None,
     scheduler: str | None = None,
     progress: Progress | None = None,
     factory: str = FACTORY,
@@ -58,7 +60,11 @@ def render(
     resume : go on with a render of the same spec that did not finish; of a finished one, hold all values against
         their digests and draw missing and damaged parts again.
     overwrite : remove the ensemble that is in `out` first.
-    layout : "long": path, step, time (where the spec has a start), one column a series.
+    layout : "long": path, step, time (where the spec has a start), one column a series. "panel": id (the name of a
+        series), path, time (step without a start), value, and what is revealed of a series beside it. "nested": a row a
+        path, a list a series. "wide": a row a step, a column a path, one series and at most 1,024 paths a file.
+    partition : "paths": a file holds all series of some paths, "series": one series; None: as usual for the layout.
+    columns : other names for the roles id, path, step, time, value of the layout, as in {"time": "week"}.
     scheduler : address of a Dask scheduler whose workers draw (extra `cluster`), or "local" to start `workers` of them
         on this machine; None: this process, and worker processes beside it.
     progress : called with (rows drawn, rows in all), often.
@@ -66,13 +72,17 @@ def render(
     Raises EnsembleError: `out` holds another ensemble or is in use, too little space, a value that is not
     finite, a file that cannot be written. KeyboardInterrupt passes through; only whole parts are left then.
     """
-    if layout not in LAYOUTS:
-        raise EnsembleError(f"expected layout {' or '.join(LAYOUTS)}, got {layout!r}")
+    asked = Layout.asked(layout, partition, columns)
     if resume and overwrite:
         raise EnsembleError("resume goes on with what is there and overwrite removes it; give one of them")
     if out is None and (resume or overwrite):
         word = "resume" if resume else "overwrite"
         raise EnsembleError(f"{word} is about a folder, and there is none; give out=, or leave {word} away")
+    if out is None and asked != Layout():
+        raise EnsembleError(
+            "layout, partition and columns are about files, and there are none; give out=, or leave them away: an "
+            "ensemble in memory shows itself by .panel(), .wide() and .nested()"
+        )
     if out is None and scheduler is not None:
         raise EnsembleError("a cluster writes files; give out=, or leave scheduler away to draw in memory")
     if out is not None:
@@ -90,7 +100,8 @@ def render(
         raise EnsembleError(f"expected at most {MOST} paths and steps, got {whole}")
     if out is None:
         return _in_memory(source, whole, progress)
-    job = Job(spec, source, whole, Folder(folder), names, layout, factory)
+    asked.check(source.columns, source.stamps is not None, whole.file(whole))
+    job = Job(spec, source, whole, Folder(folder), names, asked, factory)
     if workers is None and scheduler is None:
         workers = engines.default_workers(whole.rows * len(source.columns))
     return job.run(workers, scheduler, resume, overwrite, progress)
@@ -157,7 +168,7 @@ class Job:
     whole: Block
     folder: Folder
     reveal: tuple[str, ...]
-    layout: str
+    layout: Layout
     factory: str
 
     def __post_init__(self) -> None:
@@ -169,10 +180,10 @@ class Job:
             "paths": self.whole.paths,
             "steps": self.whole.steps,
             "stream_version": STREAM_VERSION,
-            "layout": self.layout,
+            **self.layout.identity(),
             "reveal": list(self.reveal),
         }
-        self.present = Present(self.folder, self.whole, self.identity, self.factory)
+        self.present = Present(self.folder, self.whole, self.identity, self.columns, self.factory)
 
     def run(
         self, workers: int | None, scheduler: str | None, resume: bool, overwrite: bool, progress: Progress | None
@@ -199,7 +210,9 @@ class Job:
         engine.check_sees(str(self.folder.state.absolute()))
         if overwrite:
             self.present.remove()
-        plan = self.present.chains(resume) or chains(self.whole, row_bytes(self.columns), engine.size)
+        plan = self.present.chains(resume) or chains(
+            self.whole, row_bytes(self.columns), engine.size, self.layout.widest
+        )
         there = self.present.records(plan)
         self.folder.clean_state(keep_plan=True)
         self.present.write_plan(plan)

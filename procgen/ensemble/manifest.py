@@ -14,6 +14,7 @@ from procgen.ensemble import digest
 from procgen.ensemble import seal as seals
 from procgen.ensemble.columns import TYPES, Column
 from procgen.ensemble.errors import EnsembleError
+from procgen.ensemble.layouts import Layout
 from procgen.ensemble.plan import Block
 
 FORMAT = 1
@@ -21,7 +22,10 @@ FORMAT = 1
 
 @dataclass(frozen=True)
 class PartRecord:
-    """One part: its file, what it covers, its size, and one hash over the digest nodes of its values."""
+    """One part: its name, what it covers, its size, and one hash over the digest nodes of its values.
+
+    The name is that of its file, or the end of the names of its files where a file holds one series.
+    """
 
     file: str
     block: Block
@@ -60,6 +64,10 @@ class Manifest:
     why_not_portable: str = ""
     versions: Mapping[str, str] = field(default_factory=dict)
     changed: tuple[str, ...] = ()  # fields that are not what was written
+
+    @property
+    def layout(self) -> Layout:
+        return Layout.of(self.identity)
 
     @property
     def digest(self) -> str:
@@ -122,6 +130,7 @@ class Manifest:
                 versions=dict(data["versions"]),
                 changed=seals.changed(data),
             )
+            _ = manifest.layout
             covers([part.block for part in manifest.parts], whole)
             if set(manifest.stored) | set(manifest.revealed) != {column.name for column in manifest.columns}:
                 raise ValueError("its digests and its columns name different series")

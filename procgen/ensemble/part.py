@@ -16,7 +16,8 @@ import numpy as np
 from procgen.ensemble import digest
 from procgen.ensemble.columns import Column, store
 from procgen.ensemble.draw import Drawer, Tick, empty
-from procgen.ensemble.parquet import PartWriter
+from procgen.ensemble.files import writing
+from procgen.ensemble.layouts import Layout
 from procgen.ensemble.plan import Block, Chain, batches, narrow_steps
 from procgen.ensemble.source import FACTORY, Source, open_source
 from procgen.ensemble.store import Folder
@@ -94,25 +95,25 @@ def _pass_over(task: Task, part: Block, source: Source, drawer: Drawer) -> None:
 
 
 def _render_part(task: Task, part: Block, source: Source, drawer: Drawer, folder: Folder) -> dict[str, Any]:
-    name, columns = part.file(task.whole), source.columns
+    name, columns, layout = part.file(task.whole), source.columns, Layout.of(task.identity)
     last = part.end_step == task.whole.end_step
     digests = Digests(part, columns)
     buffers: dict[str, np.ndarray] = {}
-    with folder.writing(name) as temporary:
-        with PartWriter(temporary, columns, source.stamps, {**task.identity, "part": asdict(part)}) as writer:
-            for batch in batches(part, row_bytes(columns), task.chain[0].steps):
-                if not buffers or buffers[columns[0].name].shape != (batch.paths, batch.steps):
-                    buffers = empty(batch, columns)
-                drawer.fill(batch, buffers)
-                stored = {column.name: store(buffers[column.name], column) for column in columns}
-                digests.add(batch, buffers, stored)
-                writer.write(batch, stored)
-                if last and batch.end_step == part.end_step:
-                    drawer.forget(batch)
-            writer.nodes = digests.packed(task.whole)
+    with writing(folder, name, part, layout, columns, source.stamps, task.identity) as writer:
+        for batch in batches(part, row_bytes(columns), task.chain[0].steps):
+            if not buffers or buffers[columns[0].name].shape != (batch.paths, batch.steps):
+                buffers = empty(batch, columns)
+            drawer.fill(batch, buffers)
+            stored = {column.name: store(buffers[column.name], column) for column in columns}
+            digests.add(batch, buffers, stored)
+            writer.write(batch, stored)
+            if last and batch.end_step == part.end_step:
+                drawer.forget(batch)
+        writer.nodes = digests.packed(task.whole)
         if not last:
             folder.save_state(name, drawer.state())
-    return {"part": asdict(part), "bytes": folder.size(name), "nodes": writer.nodes}
+    size = folder.sizes([*layout.files(name, columns)])
+    return {"part": asdict(part), "bytes": size, "nodes": writer.nodes}
 
 
 class Digests:

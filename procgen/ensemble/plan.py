@@ -58,9 +58,13 @@ class Block:
 Chain = tuple[Block, ...]
 
 
-def chains(whole: Block, row_bytes: int, workers: int = 1) -> tuple[Chain, ...]:
-    """The parts of `whole`, chain by chain: 50–130 MB each, fewer rows when several workers share them."""
+def chains(whole: Block, row_bytes: int, workers: int = 1, widest: int | None = None) -> tuple[Chain, ...]:
+    """The parts of `whole`, chain by chain: 50–130 MB each, fewer rows when several workers share them.
+
+    No part has more than `widest` paths, a multiple of CELL, where that is given.
+    """
     width, steps = _part_shape(whole, row_bytes)
+    width = width if widest is None else min(width, widest)
     count = _count(whole, width, CELL if width % CELL == 0 else LANES)
     if workers > 1 and whole.rows > BUSY_ROWS:
         count = max(count, workers)

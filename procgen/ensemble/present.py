@@ -7,9 +7,11 @@ from dataclasses import asdict
 from itertools import groupby
 from typing import Any
 
-from procgen.ensemble import parquet, revealed
+from procgen.ensemble import files, parquet, revealed
 from procgen.ensemble.check import Reader, Tick
+from procgen.ensemble.columns import Column
 from procgen.ensemble.errors import EnsembleError
+from procgen.ensemble.layouts import Layout
 from procgen.ensemble.manifest import Manifest, covers
 from procgen.ensemble.plan import Block, Chain
 from procgen.ensemble.seal import refuse_changed
@@ -18,11 +20,19 @@ from procgen.ensemble.store import MANIFEST, PLAN, Folder
 
 
 class Present:
-    """What a folder holds, seen by a render of `whole` that `identity` names."""
+    """What a folder holds, seen by a render of `columns` and `whole` that `identity` names."""
 
-    def __init__(self, folder: Folder, whole: Block, identity: Mapping[str, Any], factory: str = FACTORY):
+    def __init__(
+        self,
+        folder: Folder,
+        whole: Block,
+        identity: Mapping[str, Any],
+        columns: Sequence[Column],
+        factory: str = FACTORY,
+    ):
         self.folder, self.whole, self.identity, self.factory = folder, whole, identity, factory
-        self.damaged: set[str] = set()  # files of parts that `complete` found to be so
+        self.columns, self.layout = columns, Layout.of(identity)
+        self.damaged: set[str] = set()  # names of parts that `complete` found to be so
 
     def complete(self, resume: bool, progress: Tick | None = None) -> Manifest | None:
         """The manifest when all is there, None when there is something to draw.
@@ -38,7 +48,8 @@ class Present:
             refuse_changed(found, self.folder.path / MANIFEST)
         if not found.changed:  # else the parts say what they are
             self._refuse_other(found.identity)
-        suspects = [part for part in found.parts if resume or self.folder.size(part.file) != part.bytes]
+        sizes = {part: self.folder.sizes([*found.layout.files(part.file, found.columns)]) for part in found.parts}
+        suspects = [part for part, size in sizes.items() if resume or size != part.bytes]
         damages = Reader(self.folder.path, found, self.factory).examine(progress, suspects)[0] if suspects else []
         if damages and not resume:
             mend = "" if "--resume" in damages[0].sentence else "; draw it again with --resume"
@@ -70,29 +81,35 @@ class Present:
     def write_plan(self, chains: Sequence[Chain]) -> None:
         parts = [part for chain in chains for part in chain]
         blocks = [(part.first_path, part.paths, part.first_step, part.steps) for part in parts]
-        files = [part.file(self.whole) for part in parts]
-        self.folder.write_json(PLAN, {"identity": self.identity, "files": files, "parts": blocks})
+        names = [file for part in parts for file in self._files(part)]
+        self.folder.write_json(PLAN, {"identity": self.identity, "files": names, "parts": blocks})
         self.folder.begun = True
 
     def records(self, chains: Sequence[Chain]) -> dict[Block, dict[str, Any]]:
         """Records of the parts that are there, whole, and of this render."""
         found: dict[Block, dict[str, Any]] = {}
-        files, listed = set(self.folder.part_files()) - self.damaged, self._listed()
+        there, listed = set(self.folder.part_files()), self._listed()
         for part in (part for chain in chains for part in chain):
-            name = part.file(self.whole)
-            if name not in files:
-                continue
-            try:
-                identity, nodes, _ = parquet.footer(self.folder.path / name)
-            except EnsembleError as error:
-                if name in listed:
-                    continue  # ours and damaged: it is drawn again
-                raise EnsembleError(f"{error}; it is in the way and not ours: move it away") from None
-            self._refuse_other(identity)
-            size = self.folder.size(name)
-            if identity.get("part") == asdict(part):
-                found[part] = {"part": asdict(part), "bytes": size, "nodes": nodes}
+            footers = [self._footer(file, listed) for file in self._files(part) if file in there]
+            mine = [nodes for said, nodes in filter(None, footers) if said.get("part") == asdict(part)]
+            if len(mine) == len(self._files(part)) and part.file(self.whole) not in self.damaged:
+                size = self.folder.sizes(self._files(part))
+                found[part] = {"part": asdict(part), "bytes": size, "nodes": files.together(mine)}
         return found
+
+    def _files(self, part: Block) -> list[str]:
+        return [*self.layout.files(part.file(self.whole), self.columns)]
+
+    def _footer(self, file: str, listed: set[str]) -> tuple[dict[str, Any], dict[str, Any]] | None:
+        """What a file says of itself; None when it is ours and damaged, so that it is drawn again."""
+        try:
+            identity, nodes, _ = parquet.footer(self.folder.path / file)
+        except EnsembleError as error:
+            if file in listed:
+                return None
+            raise EnsembleError(f"{error}; it is in the way and not ours: move it away") from None
+        self._refuse_other(identity)
+        return identity, nodes
 
     def remove(self) -> None:
         """Remove the ensemble that is there: files that it lists or that say that they are ours."""
@@ -109,7 +126,9 @@ class Present:
     def _listed(self) -> set[str]:
         """Names of parts that the manifest or the plan in the folder lists, which makes them ours."""
         found = self._manifest()
-        mine = set() if found is None else {part.file for part in found.parts}
+        mine = set()
+        if found is not None:
+            mine = {file for part in found.parts for file in found.layout.files(part.file, found.columns)}
         return mine | set((self.folder.read_json(PLAN) or {}).get("files", ()))
 
     def _is_ours(self, name: str) -> bool:
@@ -121,11 +140,13 @@ class Present:
 
     def _refuse_other(self, identity: Mapping[str, Any]) -> None:
         names = {"spec": "spec (its digest)"}
-        differ = [key for key in self.identity if identity.get(key) != self.identity[key]]
+        keys = [*self.identity, *(key for key in identity if key not in self.identity and key != "part")]
+        differ = [key for key in keys if identity.get(key) != self.identity.get(key)]
         if len(differ) > 1 and "spec" in differ:
             differ.remove("spec")  # it holds seed, paths and steps too, which are easier to read
         if differ:
-            found = ", ".join(f"{names.get(k, k)} {identity.get(k)} there, {self.identity[k]} asked" for k in differ)
+            pairs = [(names.get(k, k), identity.get(k, "as usual"), self.identity.get(k, "as usual")) for k in differ]
+            found = ", ".join(f"{name} {there} there, {asked} asked" for name, there, asked in pairs)
             raise EnsembleError(
                 f"{self.folder.path} holds an ensemble of another kind ({found}); "
                 "choose another OUT, or remove that one with --overwrite"

@@ -12,7 +12,7 @@ import os
 import re
 import secrets
 import time
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator, Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
@@ -22,7 +22,7 @@ from procgen.ensemble.errors import EnsembleError, system_sentence
 
 MANIFEST = "manifest.json"
 PLAN = ".state/plan.json"
-PART = re.compile(r"paths-\d{9,}-\d{9,}(\.steps-\d{9,}-\d{9,})?\.parquet")
+PART = re.compile(r"(.+\.)?paths-\d{9,}-\d{9,}(\.steps-\d{9,}-\d{9,})?\.parquet")
 PATIENCE = 3.0  # seconds: workers whose parent was killed are gone by then
 
 
@@ -85,6 +85,19 @@ class Folder:
             return (self.path / name).stat().st_size
         except OSError:
             return -1
+
+    def sizes(self, names: Sequence[str]) -> int:
+        """Bytes of several files, -1 when one of them is not there."""
+        found = [self.size(name) for name in names]
+        return -1 if -1 in found else sum(found)
+
+    @contextlib.contextmanager
+    def explained(self, doing: str) -> Iterator[None]:
+        """What the operating system refuses, as a sentence."""
+        try:
+            yield
+        except OSError as error:
+            raise EnsembleError(system_sentence(error, doing)) from None
 
     def save_state(self, name: str, state: Mapping[str, np.ndarray]) -> None:
         """Keep the carried state at the end of part `name`."""

@@ -14,14 +14,16 @@ def rendered(ensemble: OnDisk) -> str:
     """Where the ensemble is, how much of it there is, and its digest."""
     from procgen.ensemble.manifest import bytes_text
 
-    whole, parts = ensemble.whole, ensemble.manifest.parts
+    manifest, whole, parts = ensemble.manifest, ensemble.whole, ensemble.manifest.parts
     size = bytes_text(sum(part.bytes for part in parts))
-    files = "1 file" if len(parts) == 1 else f"{len(parts)} files"
+    count = sum(len(manifest.layout.files(part.file, manifest.columns)) for part in parts)
     lines = [
         f"{ensemble.path}: {whole.paths:,} paths × {whole.steps:,} steps of {', '.join(ensemble.names)}",
-        f"{files}, {size}, and manifest.json",
+        f"{'1 file' if count == 1 else f'{count} files'}, {size}, and manifest.json",
         f"digest {ensemble.digest}",
     ]
+    if not manifest.layout.streams:
+        lines.insert(2, manifest.layout.sentence(manifest.time is not None))
     if not ensemble.manifest.portable:
         lines.append(f"not the same bits on every machine: {ensemble.manifest.why_not_portable}")
     return "\n".join(lines)

@@ -7,7 +7,8 @@ import pyarrow.parquet as pq
 import pytest
 
 from procgen.ensemble import EnsembleError, open_ensemble, plan
-from procgen.ensemble.parquet import IDENTITY, NODES, schema
+from procgen.ensemble.layouts import Layout
+from procgen.ensemble.parquet import IDENTITY, NODES
 from procgen.ensemble.seal import seal
 from tests.ensemble.fakes import fake_check, fake_render, fake_spec
 
@@ -194,4 +195,4 @@ def test_a_manifest_that_contradicts_itself_is_refused(made, change):
 
 
 def test_the_names_of_metadata_are_not_in_the_way_of_series():
-    assert {IDENTITY, NODES}.isdisjoint(name.encode() for name in schema([], True).names)
+    assert {IDENTITY, NODES}.isdisjoint(name.encode() for name in Layout().index(stamped=True))

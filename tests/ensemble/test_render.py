@@ -135,7 +135,7 @@ def test_sizes_are_refused_before_anything_is_drawn(tmp_path):
 @pytest.mark.parametrize(
     "how,sentence",
     [
-        ({"layout": "cube"}, "expected layout long, got 'cube'"),
+        ({"layout": "cube"}, "expected layout long, panel, nested or wide, got 'cube'"),
         ({"first_path": -1}, "expected first_path to be a whole number of at least 0, got -1"),
         ({"workers": 0}, "expected workers to be a whole number of at least 1, got 0"),
         ({"resume": True, "overwrite": True}, "give one of them"),

@@ -1,0 +1,364 @@
+"""Forms: what the rows of one file look like, from values (paths, steps) to an Arrow table and back.
+
+A file is a sequence of *units*, which stand one after another: a panel has one for each series, the other forms have
+one. A rectangle of a unit is a run of rows, so that any rectangle can be read by itself. On the way back, the columns
+that say where a row belongs are held against what must be there, and the first that differs is named.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Container, Iterator, Mapping, Sequence
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from procgen.ensemble.columns import Column
+from procgen.ensemble.errors import EnsembleError
+from procgen.ensemble.layouts import Layout, labels, owned
+from procgen.ensemble.plan import BUFFER_BYTES, GROUP_ROWS, Block, cut
+
+if TYPE_CHECKING:
+    import pyarrow as pa
+
+Unit = Sequence[Column]
+
+
+def form(layout: Layout, columns: Unit, stamps: Any, whole: Block) -> Form:
+    """The form of a file that holds `columns` of the rectangle `whole`; `stamps` is None without a start."""
+    return {"long": Long, "panel": Panel, "nested": Nested, "wide": Wide}[layout.kind](layout, columns, stamps, whole)
+
+
+class Form:
+    """Rows by path, then step; one column a series. This is layout long, and what the others share."""
+
+    def __init__(self, layout: Layout, columns: Unit, stamps: Any, whole: Block):
+        self.layout, self.columns, self.stamps, self.whole = layout, tuple(columns), stamps, whole
+        self.names = layout.index(stamps is not None)
+        self.units: list[Unit] = [self.columns]
+        self.schema = self._schema()
+        self._key: tuple[int, ...] | None = None
+        self._steps: dict[str, pa.Array] = {}
+
+    # which rows
+
+    @property
+    def keys(self) -> list[str]:
+        """Columns that repeat, which are packed, and alone have statistics."""
+        return [*self.names.values()]
+
+    def pieces(self, row_bytes: int) -> Iterator[Block]:
+        """Rectangles that are read by themselves; `row_bytes` of all columns of the ensemble."""
+        yield from cut(self.whole, max(min(GROUP_ROWS, BUFFER_BYTES // row_bytes), 1))
+
+    def pages(self, row_bytes: int) -> Iterator[tuple[Block, Unit]]:
+        """What is written as one row group, in the order of the file."""
+        for unit in self.units:
+            for block in self.pieces(row_bytes):
+                yield block, unit
+
+    def rows(self, block: Block) -> int:
+        """Rows of a unit in a rectangle."""
+        return block.rows
+
+    def start(self, unit: int, block: Block) -> int:
+        """The row at which a rectangle begins, of unit number `unit`."""
+        before = (block.first_path - self.whole.first_path) * self.whole.steps
+        return unit * self.whole.rows + before + block.first_step - self.whole.first_step
+
+    def total(self) -> int:
+        """Rows of the file."""
+        return len(self.units) * self.rows(self.whole)
+
+    # from values to rows
+
+    def _schema(self) -> pa.Schema:
+        import pyarrow as pa
+
+        return pa.schema([*self._index_fields(), *(_field(c.name, arrow_type(c.type), c) for c in self.columns)])
+
+    def _index_fields(self) -> list[pa.Field]:
+        import pyarrow as pa
+
+        kinds = {"id": pa.string(), "path": pa.int64(), "step": pa.int64(), "time": self._time_type()}
+        return [_field(name, kinds[role]) for role, name in self.names.items()]
+
+    def _time_type(self) -> pa.DataType:
+        import pyarrow as pa
+
+        return pa.int64() if self.stamps is None else pa.timestamp("us", tz="UTC")
+
+    def table(self, block: Block, unit: Unit, values: Mapping[str, np.ndarray]) -> pa.Table:
+        """The rows of a unit in a rectangle, from values (paths, steps) as they are stored."""
+        import pyarrow as pa
+
+        data = [array(values[column.name], arrow_type(column.type)) for column in unit]
+        return pa.Table.from_arrays([*self._index(block, unit).values(), *data], schema=self.schema)
+
+    def _index(self, block: Block, unit: Unit) -> dict[str, pa.Array]:
+        """The index columns by role; what only depends on the steps is built once."""
+        import pyarrow as pa
+
+        key = (block.paths, block.first_step, block.steps)
+        if key != self._key:
+            self._key, self._steps = key, {}
+            for role in ("step", "time"):
+                if role in self.names:
+                    self._steps[role] = array(np.tile(self._at(role, block), block.paths), self._kind(role))
+        paths = np.repeat(np.arange(block.first_path, block.end_path), block.steps)
+        found = {"path": array(paths, pa.int64()), **self._steps}
+        return {role: found[role] for role in self.names if role in found}
+
+    def _kind(self, role: str) -> pa.DataType:
+        return self.schema.field(self.names[role]).type
+
+    def _at(self, role: str, block: Block) -> np.ndarray:
+        """Steps, or times in microseconds, of a rectangle (steps,)."""
+        if role == "step" or self.stamps is None:
+            return np.arange(block.first_step, block.end_step)
+        return np.asarray(self.stamps(block.first_step, block.steps), np.int64)
+
+    # from rows to values
+
+    def wanted(self, unit: Unit, names: Container[str]) -> Unit:
+        """The columns of a unit that must be read for the columns of these names."""
+        return [column for column in unit if column.name in names]
+
+    def needs(self, block: Block, unit: Unit) -> list[str]:
+        """The columns to read for the columns of a unit."""
+        return [*self.keys, *(column.name for column in unit)]
+
+    def values(self, table: pa.Table, block: Block, unit: Unit, where: object) -> dict[str, np.ndarray]:
+        """Stored values (paths, steps) by name; EnsembleError where a row is not what belongs there."""
+        shape = block.paths, block.steps
+        self._expect_index(table, block, where)
+        return {c.name: exactly(flat(table, c.name, where), c, where).reshape(shape) for c in unit}
+
+    def _expect_index(self, table: pa.Table, block: Block, where: object) -> None:
+        for role, name in self.names.items():
+            if role != "id":
+                paths = np.arange(block.first_path, block.end_path)[:, None]
+                wanted = paths if role == "path" else self._at(role, block)
+                expect(where, name, flat(table, name, where).reshape(block.paths, block.steps), wanted, block)
+
+
+class Long(Form):
+    pass
+
+
+class Panel(Form):
+    """Rows by id, path, then step; ids are names of series, and what is revealed of them stands beside the value."""
+
+    def __init__(self, layout: Layout, columns: Unit, stamps: Any, whole: Block):
+        self.value = layout.name("value")
+        super().__init__(layout, columns, stamps, whole)
+        self.units = [*owned(columns)]
+
+    def _schema(self) -> pa.Schema:
+        import pyarrow as pa
+
+        units = owned(self.columns)
+        types = {some[0].type for some in units}
+        value = pa.field(self.value, arrow_type(types.pop() if len(types) == 1 else "float64"), nullable=False)
+        beside = [labels(some) for some in units]
+        revealed = [
+            pa.field(label, pa.float64(), nullable=not all(label in some for some in beside))
+            for label in dict.fromkeys(label for some in beside for label in some)
+        ]
+        return pa.schema([*self._index_fields(), value, *revealed])
+
+    def table(self, block: Block, unit: Unit, values: Mapping[str, np.ndarray]) -> pa.Table:
+        import pyarrow as pa
+
+        index = {"id": pa.repeat(unit[0].name, block.rows), **self._index(block, unit)}
+        kind = self.schema.field(self.value).type
+        main = np.ascontiguousarray(values[unit[0].name], kind.to_pandas_dtype())
+        beside = {label: values[c.name] for label, c in zip(labels(unit), unit[1:], strict=True)}
+        data = [array(main, kind)]
+        for place in self.schema.names[len(index) + 1 :]:
+            data.append(array(beside[place], pa.float64()) if place in beside else pa.nulls(block.rows, pa.float64()))
+        return pa.Table.from_arrays([*index.values(), *data], schema=self.schema)
+
+    def wanted(self, unit: Unit, names: Container[str]) -> Unit:
+        return unit if super().wanted(unit, names) else []
+
+    def needs(self, block: Block, unit: Unit) -> list[str]:
+        return self.schema.names
+
+    def values(self, table: pa.Table, block: Block, unit: Unit, where: object) -> dict[str, np.ndarray]:
+        self._expect_index(table, block, where)
+        self._expect_id(table, unit[0].name, block, where)
+        places = dict(zip([self.value, *labels(unit)], unit, strict=True))
+        for name in self.schema.names[len(self.names) :]:
+            if name not in places and table.column(name).null_count < table.num_rows:
+                raise EnsembleError(f"{where} is damaged: column {name} has values where {unit[0].name} has none")
+        shape = block.paths, block.steps
+        return {c.name: exactly(flat(table, name, where), c, where).reshape(shape) for name, c in places.items()}
+
+    def _expect_id(self, table: pa.Table, name: str, block: Block, where: object) -> None:
+        import pyarrow.compute as pc
+
+        column = table.column(self.names["id"])
+        if not pc.all(pc.fill_null(pc.equal(column, name), False)).as_py():
+            others = [other for other in pc.unique(column).to_pylist() if other != name]
+            raise EnsembleError(
+                f"{where} is damaged: where rows of {name} belong ({block}), column {self.names['id']} has {others[0]}"
+            )
+
+
+class Nested(Form):
+    """A row a path: its number, the first step, the time of that, and a list of values a series."""
+
+    def _schema(self) -> pa.Schema:
+        import pyarrow as pa
+
+        lists = [pa.list_(pa.field("element", arrow_type(c.type), nullable=False)) for c in self.columns]
+        fields = [_field(c.name, kind, c) for c, kind in zip(self.columns, lists, strict=True)]
+        return pa.schema([*self._index_fields(), *fields])
+
+    def pieces(self, row_bytes: int) -> Iterator[Block]:
+        yield from _ranges(self.whole, row_bytes)
+
+    def rows(self, block: Block) -> int:
+        return block.paths
+
+    def start(self, unit: int, block: Block) -> int:
+        return block.first_path - self.whole.first_path
+
+    def table(self, block: Block, unit: Unit, values: Mapping[str, np.ndarray]) -> pa.Table:
+        import pyarrow as pa
+
+        ends = array(np.arange(block.paths + 1, dtype=np.int32) * np.int32(block.steps), pa.int32())
+        lists = []
+        for column in unit:
+            inside = array(values[column.name], arrow_type(column.type))
+            lists.append(pa.ListArray.from_arrays(ends, inside, type=self.schema.field(column.name).type))
+        index = [array(self._of_rows(role, block), self._kind(role)) for role in self.names]
+        return pa.Table.from_arrays([*index, *lists], schema=self.schema)
+
+    def _of_rows(self, role: str, block: Block) -> np.ndarray:
+        if role == "path":
+            return np.arange(block.first_path, block.end_path)
+        return np.repeat(self._at(role, Block(block.first_path, 1, block.first_step, 1)), block.paths)
+
+    def values(self, table: pa.Table, block: Block, unit: Unit, where: object) -> dict[str, np.ndarray]:
+        first = Block(block.first_path, block.paths, block.first_step, 1)
+        for role, name in self.names.items():
+            expect(where, name, flat(table, name, where)[:, None], self._of_rows(role, block)[:, None], first)
+        return {c.name: exactly(self._list(table, c, block, where), c, where) for c in unit}
+
+    def _list(self, table: pa.Table, column: Column, block: Block, where: object) -> np.ndarray:
+        import pyarrow.compute as pc
+
+        lists = table.column(column.name)
+        sizes = numbers(pc.list_value_length(lists), column.name, where)
+        expect(where, f"{column.name} (its length)", sizes[:, None], np.full((block.paths, 1), block.steps), block)
+        return numbers(pc.list_flatten(lists), column.name, where).reshape(block.paths, block.steps)
+
+
+class Wide(Form):
+    """A row a step, a column a path; one series."""
+
+    def _schema(self) -> pa.Schema:
+        import pyarrow as pa
+
+        kind, column = arrow_type(self.columns[0].type), self.columns[0]
+        return pa.schema([*self._index_fields(), *(_field(name, kind, column) for name in self._paths(self.whole))])
+
+    def _paths(self, block: Block) -> list[str]:
+        word = self.layout.name("path")
+        return [f"{word}_{path}" for path in range(block.first_path, block.end_path)]
+
+    def pieces(self, row_bytes: int) -> Iterator[Block]:
+        yield from _ranges(self.whole, row_bytes)
+
+    def pages(self, row_bytes: int) -> Iterator[tuple[Block, Unit]]:
+        yield self.whole, self.columns
+
+    def rows(self, block: Block) -> int:
+        return block.steps
+
+    def start(self, unit: int, block: Block) -> int:
+        return block.first_step - self.whole.first_step
+
+    def table(self, block: Block, unit: Unit, values: Mapping[str, np.ndarray]) -> pa.Table:
+        import pyarrow as pa
+
+        kind, data = arrow_type(unit[0].type), values[unit[0].name]
+        index = [array(self._at(role, block), self._kind(role)) for role in self.names]
+        return pa.Table.from_arrays([*index, *(array(path, kind) for path in data)], schema=self.schema)
+
+    def needs(self, block: Block, unit: Unit) -> list[str]:
+        return [*self.keys, *self._paths(block)]
+
+    def values(self, table: pa.Table, block: Block, unit: Unit, where: object) -> dict[str, np.ndarray]:
+        for role, name in self.names.items():
+            first = Block(block.first_path, 1, block.first_step, block.steps)
+            expect(where, name, flat(table, name, where)[None], self._at(role, block)[None], first)
+        columns = [exactly(flat(table, name, where), unit[0], where) for name in self._paths(block)]
+        return {unit[0].name: np.stack(columns)}
+
+
+def _ranges(whole: Block, row_bytes: int) -> Iterator[Block]:
+    """Ranges of paths with all steps of `whole`."""
+    yield from cut(whole, max(min(GROUP_ROWS, BUFFER_BYTES // row_bytes), whole.steps))
+
+
+def _field(name: str, kind: pa.DataType, column: Column | None = None) -> pa.Field:
+    import pyarrow as pa
+
+    unit = {"unit": column.unit} if column is not None and column.unit else None
+    return pa.field(name, kind, nullable=False, metadata=unit)
+
+
+def arrow_type(name: str) -> pa.DataType:
+    """The Arrow type of a column's type."""
+    import pyarrow as pa
+
+    return {"float64": pa.float64(), "float32": pa.float32(), "int64": pa.int64()}[name]
+
+
+def array(values: np.ndarray, kind: pa.DataType) -> pa.Array:
+    """An Arrow array over the same memory, where that is in one piece."""
+    import pyarrow as pa
+
+    return pa.Array.from_buffers(kind, values.size, [None, pa.py_buffer(np.ascontiguousarray(values).reshape(-1))])
+
+
+def flat(table: pa.Table, name: str, where: object) -> np.ndarray:
+    """The numbers of a column; times as microseconds."""
+    return numbers(table.column(name), name, where)
+
+
+def numbers(column: pa.ChunkedArray, name: str, where: object) -> np.ndarray:
+    """The numbers of an Arrow column that has no missing ones; times as microseconds."""
+    import pyarrow as pa
+
+    if column.null_count:
+        raise EnsembleError(f"{where} is damaged: column {name} has missing values")
+    if column.num_chunks == 1:  # its memory as it is; `to_numpy` would import pandas for it
+        chunk = column.chunk(0)
+        kind = "<i8" if pa.types.is_timestamp(column.type) else np.dtype(column.type.to_pandas_dtype())
+        return np.frombuffer(chunk.buffers()[1], kind, len(chunk), chunk.offset * np.dtype(kind).itemsize)
+    return column.cast(pa.int64()).to_numpy() if pa.types.is_timestamp(column.type) else column.to_numpy()
+
+
+def exactly(values: np.ndarray, column: Column, where: object) -> np.ndarray:
+    """Values in the type of their column, where a panel keeps columns of several types in one."""
+    if values.dtype == column.type:
+        return values
+    with np.errstate(all="ignore"):
+        kept = values.astype(column.type)
+    if not np.array_equal(kept.astype(values.dtype), values):
+        raise EnsembleError(f"{where} is damaged: a value of {column.name} is not of type {column.type}")
+    return kept
+
+
+def expect(where: object, name: str, got: np.ndarray, wanted: np.ndarray, block: Block) -> None:
+    """EnsembleError naming the first row of a rectangle that is not the one that belongs there."""
+    if np.array_equal(got, np.broadcast_to(wanted, got.shape)):
+        return
+    i, j = np.argwhere(got != wanted)[0]
+    raise EnsembleError(
+        f"{where} is damaged: where path {block.first_path + i}, step {block.first_step + j} belongs, "
+        f"column {name} has {got[i, j]}"
+    )
