@@ -6,7 +6,9 @@ text where numbers should be.
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
+import difflib
+import re
+from collections.abc import Iterator, Mapping, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -14,14 +16,18 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.checks.blocks import GROUP
+from procgen.checks.clock import ClockError, NoTime, Times, mismatch, steps_on_grid
 from procgen.checks.gather import Gather
 from procgen.checks.lane import Progress, in_one_process
 from procgen.checks.verdict import Check
+from procgen.checks.words import many
 from procgen.ensemble.plan import Block
 
 if TYPE_CHECKING:
     import pandas as pd
 
+_FEW = 12  # columns, up to which all are listed
+_DECIMAL_COMMA = re.compile(r"[+-]?[\d.]*,\d+")
 BLOCK = 1 << 22  # values of one series that are handed on at once
 
 
@@ -45,6 +51,9 @@ def read_table(path: Path, spec: Any, columns: Mapping[str, str] | None) -> Tabl
         elif suffix in (".csv", ".tsv", ".txt", ".gz"):
             separator = "\t" if ".tsv" in path.suffixes else ","
             head = pd.read_csv(path, sep=separator, nrows=0)
+            if len(head.columns) == 1 and ";" in str(head.columns[0]):  # as written where the comma is the decimal sign
+                separator = ";"
+                head = pd.read_csv(path, sep=separator, nrows=0)
             wanted = Names(list(head.columns), spec, columns, path.name)
             frame = pd.read_csv(path, sep=separator, usecols=wanted.all, low_memory=False)
         else:
@@ -80,8 +89,9 @@ class Names:
         timed = "time" in given and "step" not in given  # a column that is named goes before one that is only there
         self.step = None if timed else self._pick("step", given, False)
         self.time = None if self.step else self._pick("time", given, False)
+        self.clock = self._pick("time", given, False) if self.step else None  # to be compared with the steps
         self.series = {name: self._pick(name, given, True) for name in spec.series}
-        self.all = [c for c in (self.path, self.step, self.time, *self.series.values()) if c is not None]
+        self.all = [c for c in (self.path, self.step, self.time, self.clock, *self.series.values()) if c is not None]
 
     def _pick(self, role: str, given: Mapping[str, str], needed: bool) -> Any:
         name = given.get(role, role)
@@ -92,11 +102,20 @@ class Names:
 
             hint = did_you_mean(name, self.found)
             raise TableError(
-                f"{self.where} has no column {name!r} for {role}; its columns are {', '.join(self.found)}"
+                f"{self.where} has no column {name!r} for {role}; its {listed(name, self.found)}"
                 + (f" ({hint})" if hint else "")
                 + f"; {_option(role)}"
             )
         return None
+
+
+def listed(name: str, found: Sequence[Any]) -> str:
+    """The columns of a table in words: all of few, or their number and the five nearest to a name."""
+    columns = [str(column) for column in found]
+    if len(columns) <= _FEW:
+        return f"columns are {', '.join(columns)}"
+    near = difflib.get_close_matches(name, columns, n=5, cutoff=0.0)
+    return f"{len(columns)} columns have none of that name, the nearest are {', '.join(near)}"
 
 
 def _option(role: str) -> str:
@@ -120,6 +139,8 @@ class Table:
         path, labels = _codes(frame[names.path]) if names.path else (np.zeros(len(frame), np.int64), ["0"])
         self.labels: list[Any] = labels
         step = self._steps(frame, names, path)
+        if names.clock is not None:
+            self._compare_times(frame[names.clock], step)
         self.paths, self.steps = len(self.labels), int(step.max()) + 1
         if self.paths * self.steps > 4 * len(frame) + 1_000_000:
             raise TableError(
@@ -129,7 +150,7 @@ class Table:
         self.rows = self.paths * self.steps
         if names.path is None and len(np.unique(step)) < len(step):
             raise TableError(
-                f"{where}: steps repeat, and there is no column path; columns are {', '.join(map(str, names.found))}; "
+                f"{where}: steps repeat, and there is no column path; {listed('path', names.found)}; "
                 f"{_option('path')}"
             )
         self._place(path, step)
@@ -176,9 +197,9 @@ class Table:
         if names.step is not None:
             column = frame[names.step]
             numeric = column.dtype.kind in "iuf" or not _looks_like_times(column)
-            return self._numbered(column, names.step) if numeric else self._timed(column, names.step)
+            return self._numbered(column, names.step) if numeric else self._timed(column)
         if names.time is not None:
-            return self._timed(frame[names.time], names.time)
+            return self._timed(frame[names.time])
         self._say("step order", "no column of steps or times: rows of a path are taken in their order", "reported")
         order = np.argsort(path, kind="stable")
         starts = np.searchsorted(path[order], np.arange(len(self.labels)))
@@ -206,46 +227,28 @@ class Table:
             raise TableError(f"{self.where}: expected steps from 0 on in {name}, got {lowest}")
         return step
 
-    def _timed(self, column: pd.Series, name: str) -> NDArray[np.int64]:
-        import pandas as pd
-
+    def _timed(self, column: pd.Series) -> NDArray[np.int64]:
         try:
-            times = pd.to_datetime(column, errors="coerce", format="mixed")
-        except ValueError:  # offsets that differ, as across a change of clocks
-            times = pd.to_datetime(column, errors="coerce", utc=True, format="mixed")
-        if times.isna().any():
-            row = int(np.argmax(times.isna().to_numpy()))
-            raise TableError(
-                f"{self.where}: {_cell(column, row)} in row {row} of {name} is no time; {_option('time')}, or one of "
-                "whole steps with --step-col NAME"
-            )
-        naive = times.dt.tz is None
-        utc = times.dt.tz_localize("UTC") if naive else times.dt.tz_convert("UTC")
-        stamps = utc.dt.tz_localize(None).to_numpy().astype("datetime64[us]").astype(np.int64)
-        if self.spec.time.start is None:
-            return np.unique(stamps, return_inverse=True)[1].astype(np.int64)
-        return self._on_grid(stamps, times if naive else None, column, name)
+            times = Times(column, self.spec.time.zone)
+            if self.spec.time.start is None:
+                return np.unique(times.utc, return_inverse=True)[1].astype(np.int64)
+            return steps_on_grid(times, self.spec.time)
+        except NoTime as error:
+            other = f"{_option('time')}, or one of whole steps with --step-col NAME"
+            raise TableError(f"{self.where}: {error}; {other}") from None
+        except ClockError as error:
+            raise TableError(f"{self.where}: {error}") from None
 
-    def _on_grid(self, stamps: NDArray, naive: pd.Series | None, column: pd.Series, name: str) -> NDArray[np.int64]:
-        """Steps of the stamps on the spec's calendar; times without a zone are in UTC, or else in the spec's."""
-        grid = np.asarray(self.spec.time.stamps(0, self.spec.time.steps)).astype(np.int64)
-        step = np.searchsorted(grid, stamps)
-        on = (step < len(grid)) & (grid[np.minimum(step, len(grid) - 1)] == stamps)
-        if not on.all() and naive is not None and self.spec.time.zone:
-            local = naive.dt.tz_localize(self.spec.time.zone, ambiguous=True, nonexistent="shift_forward")
-            other = local.dt.tz_convert("UTC").dt.tz_localize(None).to_numpy().astype("datetime64[us]").astype(np.int64)
-            moved = np.searchsorted(grid, other)
-            fits = (moved < len(grid)) & (grid[np.minimum(moved, len(grid) - 1)] == other)
-            if fits.sum() > on.sum():
-                step, on = moved, fits
-        if not on.all():
-            row = int(np.argmax(~on))
-            first = np.array(grid[0], dtype="datetime64[us]")
-            raise TableError(
-                f"{self.where}: {column.iloc[row]} in row {row} of {name} is no step of the spec, whose time starts at "
-                f"{first} UTC; {int((~on).sum())} of {len(on)} rows are off its grid"
-            )
-        return step.astype(np.int64)
+    def _compare_times(self, column: pd.Series, step: NDArray[np.int64]) -> None:
+        """Times that stand beside steps: are they those that the spec gives these steps?"""
+        if self.spec.time.start is None or column.dtype.kind in "iufb":
+            return
+        try:
+            fault = mismatch(Times(column, self.spec.time.zone), step, self.spec.time)
+        except ClockError as error:
+            self._say("times", f"they are not compared with the spec's: {error}", "reported")
+            return
+        self._checks.append(Check.fact("", "times", "all rows", fault, "every time is that of its step"))
 
     def _place(self, path: NDArray, step: NDArray) -> None:
         """Sort rows by path and step; name what is missing or there twice."""
@@ -258,21 +261,22 @@ class Table:
         twice = np.flatnonzero(self._key[1:] == self._key[:-1])
         fault = ""
         if twice.size:
-            fault = f"{twice.size} rows are there twice, the first {self._where(self._key[twice[0]])}"
+            are = "is" if twice.size == 1 else "are"
+            fault = f"{many(twice.size, 'row')} {are} there twice, the first {self._where(self._key[twice[0]])}"
             keep = np.concatenate([[True], self._key[1:] != self._key[:-1]])
             self._key, self._order = self._key[keep], self._order[keep]
         missing = self.rows - len(self._key)
         if missing:
             gap = np.flatnonzero(self._key != np.arange(len(self._key)))
             first = self._where(int(gap[0]) if gap.size else len(self._key))
-            begin = int((self._key % self.steps).min())
+            begin, are = int((self._key % self.steps).min()), "is" if missing == 1 else "are"
             late = (
                 f": no path has a step before {begin}; if this is a window that starts at step {begin}, it cannot be "
                 f"compared as it is: give the steps from 0 on too (a spec states its values from step 0)"
                 if begin
                 else ""
             )
-            fault = "; ".join(filter(None, [fault, f"{missing} rows are missing, the first {first}{late}"]))
+            fault = "; ".join(filter(None, [fault, f"{many(missing, 'row')} {are} missing, the first {first}{late}"]))
             self.absent = missing
         self._checks.append(Check.fact("", "every path and step once", "all rows", fault, "each is there once"))
 
@@ -288,7 +292,14 @@ class Table:
         text = np.isnan(values) & column.notna().to_numpy()
         if text.any():
             row = int(np.argmax(text))
-            fault = f"{int(text.sum())} values are no numbers, the first {_cell(column, row)} in row {row}"
+            cell, count = column.iloc[row], int(text.sum())
+            if isinstance(cell, str) and _DECIMAL_COMMA.fullmatch(cell.strip()):
+                raise TableError(
+                    f"{self.where}: {name} has decimal commas, the first {cell!r} in row {row}; write numbers with a "
+                    f"point, or read the file with pandas.read_csv(…, decimal=',') and give validate the DataFrame"
+                )
+            are = "value is no number" if count == 1 else "values are no numbers"
+            fault = f"{count:,} {are}, the first {_cell(column, row)} in row {row}"
             self._checks.append(Check.fact(name, "numbers", "all rows", fault))
         return values
 

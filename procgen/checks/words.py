@@ -43,6 +43,11 @@ FARTHEST = "farthest value"
 _LEAST_P = math.log(1e-300)  # below this a p is only said to be smaller
 
 
+def many(count: int, what: str) -> str:
+    """The count with its noun, such as 1 path or 1,000 paths."""
+    return f"{count:,} {what}{'' if count == 1 else 's'}"
+
+
 def number(x: float | None, digits: int = 5) -> str:
     """A number in few letters; a dash for what is not known."""
     if x is None or math.isnan(x):

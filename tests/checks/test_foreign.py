@@ -82,7 +82,7 @@ def test_missing_and_doubled_rows_are_named(frame):
     verdict = validate(spoiled, SPEC)
     assert verdict.agrees is False
     assert verdict.headline[0].startswith(
-        "structure: 1 rows are there twice, the first path 3, step 20; 2 rows are missing, the first path 1, step 5"
+        "structure: 1 row is there twice, the first path 3, step 20; 2 rows are missing, the first path 1, step 5"
     )
 
 
@@ -93,7 +93,7 @@ def test_text_and_empty_cells_are_named(frame, tmp_path):
     spoiled.to_csv(tmp_path / "t.csv", index=False)
     verdict = validate(tmp_path / "t.csv", SPEC)
     lines = "\n".join(row.note for row in verdict.rows if row.outcome == "departs")
-    assert "1 values are no numbers, the first 'n/a?' in row 7" in lines
+    assert "1 value is no number, the first 'n/a?' in row 7" in lines
     assert "1 value is not finite, the first at path 1, step 39" in lines
 
 
@@ -146,7 +146,7 @@ def test_a_missing_path_column_is_asked_for(frame):
 
 def test_missing_rows_are_named_once_and_a_window_as_a_window(frame):
     notes = [r.note for r in validate(frame.drop(index=[65]), SPEC).rows if r.outcome == "departs"]
-    assert notes == ["1 rows are missing, the first path 1, step 5"]
+    assert notes == ["1 row is missing, the first path 1, step 5"]
     notes = [r.note for r in validate(frame[frame["step"] >= 20], SPEC).rows if r.kind == "structure"]
     assert any("a window that starts at step 20" in note for note in notes)
     assert not any("not finite" in note for note in notes)
@@ -186,3 +186,92 @@ def test_a_mean_alone_is_no_agreement():
     assert verdict.agrees is None
     assert verdict.title.startswith("CANNOT BE JUDGED: nothing about the spread of vol could be judged; only level")
     assert "needs about 95 steps, not 50" in verdict.to_text()
+
+
+QUARTERS = {**RAW, "time": {"start": "2027-10-31", "every": "15min", "steps": 40, "zone": "Europe/Berlin"}}
+STARTS = np.datetime64("2027-10-30T22:00")  # 00:00 there; at 03:00 the clocks go back to 02:00
+HOURLY = "expected every 15 min, the first at 2027-10-30T22:00 UTC, got every 1 h, the first at 2027-10-30T22:00 UTC"
+
+
+@pytest.fixture(scope="module")
+def quarters():
+    spec = read_spec({**QUARTERS, "series": {"x": RAW["series"]["x"]}})
+    path, step = np.divmod(np.arange(150 * 40), 40)
+    return spec, pd.DataFrame({"path": path, "step": step, "x": draw(spec)["x"].ravel()})
+
+
+def timed(table, minutes=15, shift=0, zone=None):
+    stamps = STARTS + np.timedelta64(1, "m") * (table["step"].to_numpy() * minutes + shift)
+    times = pd.Series(stamps).dt.tz_localize("UTC")
+    return table.assign(time=times if zone is None else times.dt.tz_convert(zone).dt.tz_localize(None))
+
+
+@pytest.mark.parametrize("zone", [None, "UTC", "Europe/Berlin"])  # the last holds 02:00 to 03:00 twice
+def test_times_beside_their_steps_agree(quarters, zone):
+    spec, table = quarters
+    verdict = validate(timed(table, zone=zone), spec)
+    assert verdict.agrees is True
+    assert next(row for row in verdict.rows if row.what == "times").outcome == "agrees"
+
+
+@pytest.mark.parametrize(
+    ("change", "said"),
+    [
+        ({"minutes": 60}, HOURLY),
+        ({"shift": 15}, "got the first at 2027-10-30T22:15 UTC, 15 min later (one step)"),
+        ({"shift": -15}, "got the first at 2027-10-30T21:45 UTC, 15 min earlier (one step)"),
+        ({"zone": "Asia/Tokyo"}, "9 h later (another time zone?); times without a zone are read as UTC, or else as "),
+        ({"shift": 365 * 1440}, "got the first at 2028-10-29T22:00 UTC, 365 days later"),
+    ],
+)
+def test_a_grid_that_is_not_the_specs_is_told(quarters, change, said):
+    spec, table = quarters
+    table = timed(table, **change)
+    verdict = validate(table, spec)
+    assert verdict.agrees is False
+    assert verdict.headline[0].startswith("structure: ") and said in verdict.headline[0]
+    with pytest.raises(TableError, match="is no step of the spec; ") as error:
+        validate(table.drop(columns="step"), spec)
+    assert said in str(error.value)
+
+
+def test_one_time_off_and_a_column_that_holds_none(quarters):
+    spec, table = quarters
+    table = timed(table)
+    table.loc[[41], "time"] += pd.Timedelta("1min")
+    line = validate(table, spec).headline[0]
+    said = "structure: 1 time of 6,000 is not that of its step, the first 2027-10-30 22:16:00+00:00 in row 41, step 1: "
+    assert line.startswith(said)
+    told = [row for row in validate(table.assign(time="soon"), spec).rows if row.what == "times"]
+    assert [(row.outcome, row.note) for row in told] == [
+        ("reported", "they are not compared with the spec's: 'soon' in row 0 of time is no time")
+    ]
+
+
+@pytest.mark.parametrize(
+    ("style", "mended"),
+    [("%d/%m/%Y %H:%M", "2027-10-30 22:00"), ("%m-%d-%Y", "2027-10-30"), ("%d.%m.%y", "2027-10-30")],
+)
+def test_dates_with_the_day_or_the_month_first_are_refused(quarters, style, mended, tmp_path):
+    spec, table = quarters
+    timed(table).assign(time=lambda t: t["time"].dt.strftime(style)).drop(columns="step").to_csv(tmp_path / "t.csv")
+    with pytest.raises(TableError, match="in row 0 of time may have its day or its month first") as error:
+        validate(tmp_path / "t.csv", spec)
+    assert str(error.value).endswith(f"write times with the year first (ISO 8601), such as {mended}")
+
+
+def test_semicolons_are_read_and_decimal_commas_named(frame, tmp_path):
+    frame.to_csv(tmp_path / "points.csv", sep=";", index=False)
+    assert validate(tmp_path / "points.csv", SPEC).agrees is True
+    frame.to_csv(tmp_path / "commas.csv", sep=";", decimal=",", index=False)
+    with pytest.raises(TableError, match="x has decimal commas, the first '[-0-9]+,[0-9]+' in row 0; write numbers"):
+        validate(tmp_path / "commas.csv", SPEC)
+
+
+def test_of_many_columns_the_nearest_are_listed(frame):
+    others = pd.DataFrame(0, frame.index, [f"c{k}" for k in range(200)])
+    wide = pd.concat([frame.rename(columns={"x": "xx"}), others], axis=1)
+    said = "no column 'x' for x; its 204 columns have none of that name, the nearest are xx, "
+    with pytest.raises(TableError, match=said) as error:
+        validate(wide, SPEC)
+    assert len(str(error.value)) < 250

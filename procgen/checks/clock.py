@@ -1,0 +1,162 @@
+"""Times of anyone's table against the spec's grid: which step each is, and what is said where they are others."""
+
+from __future__ import annotations
+
+import re
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from procgen.checks.words import many
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+_DAY_FIRST = re.compile(r"\s*(\d{1,2})[/.\-](\d{1,2})[/.\-](\d{4}|\d{2})\b(.*)")
+_UNITS = ((86_400_000_000, "day"), (3_600_000_000, "h"), (60_000_000, "min"), (1_000_000, "s"))
+_ZONES = 14 * 3_600_000_000  # microseconds, the farthest that a zone is from UTC
+
+
+class ClockError(ValueError):
+    """A column that holds no times, or times that are no steps of the spec; the message says which and why."""
+
+
+class NoTime(ClockError):
+    """A column that holds something else: another one may be meant."""
+
+
+class Times:
+    """A column of times as microseconds UTC; `local` (or None) are those of times without a zone, taken as the spec's.
+
+    Raises ClockError where one is no time (NoTime), or its day and month cannot be told apart.
+    """
+
+    def __init__(self, column: pd.Series, zone: str | None):
+        import pandas as pd
+
+        self.column = column
+        codes, texts = pd.factorize(column, use_na_sentinel=False)  # as many as steps, not as rows
+        found = pd.Series(texts)
+        if found.dtype == object or pd.api.types.is_string_dtype(found):
+            self._refuse_day_first(found, codes)
+        try:
+            times = pd.to_datetime(found, errors="coerce", format="mixed")
+        except ValueError:  # offsets that differ, as across a change of clocks
+            times = pd.to_datetime(found, errors="coerce", utc=True, format="mixed")
+        if times.isna().any():
+            row = int(np.argmax(times.isna().to_numpy()[codes]))
+            value = column.iloc[row]
+            given = repr(value) if isinstance(value, str) else str(value)
+            raise NoTime(f"{given} in row {row} of {column.name} is no time")
+        naive = times.dt.tz is None
+        self.utc = _microseconds(times.dt.tz_localize("UTC") if naive else times)[codes]
+        self.local: NDArray[np.int64] | None = None
+        if naive and zone:
+            self.local = _microseconds(times.dt.tz_localize(zone, ambiguous=True, nonexistent="shift_forward"))[codes]
+
+    def _refuse_day_first(self, found: pd.Series, codes: NDArray) -> None:
+        """Which of 03/01/2027 is the month cannot be seen, and of 31/12/2027 only by chance."""
+        for place, text in enumerate(found):
+            match = _DAY_FIRST.fullmatch(text) if isinstance(text, str) else None
+            if match is None:
+                continue
+            row = int(np.argmax(codes == place))
+            one, other, year, rest = match.groups()
+            day, month = (other, one) if int(other) > 12 else (one, other)
+            year = year if len(year) == 4 else f"20{year}"
+            raise ClockError(
+                f"{text!r} in row {row} of {self.column.name} may have its day or its month first; write times with "
+                f"the year first (ISO 8601), such as {year}-{int(month):02d}-{int(day):02d}{rest.rstrip()}"
+            )
+
+
+def _microseconds(times: pd.Series) -> NDArray[np.int64]:
+    return times.dt.tz_convert("UTC").dt.tz_localize(None).to_numpy().astype("datetime64[us]").astype(np.int64)
+
+
+def steps_on_grid(times: Times, time: Any) -> NDArray[np.int64]:
+    """The step of each time on the calendar of a spec; times without a zone are UTC, or else the spec's.
+
+    Raises ClockError when some are no steps of it.
+    """
+    grid = _grid(time, time.steps)
+    step, on = _placed(grid, times.utc)
+    if not on.all() and times.local is not None:
+        moved, fits = _placed(grid, times.local)
+        if fits.sum() > on.sum():
+            step, on = moved, fits
+    if not on.all():
+        row = int(np.argmax(~on))
+        raise ClockError(
+            f"{times.column.iloc[row]} in row {row} of {times.column.name} is no step of the spec; "
+            f"{int((~on).sum())} of {many(len(on), 'row')} {'is' if len(on) == 1 else 'are'} off its grid: "
+            f"{difference(grid, times, time)}"
+        )
+    return step
+
+
+def mismatch(times: Times, step: NDArray[np.int64], time: Any) -> str:
+    """What is wrong with times that stand beside their steps, or nothing."""
+    grid = _grid(time, int(step.max()) + 1)
+    wrong = grid[step] != times.utc
+    if wrong.any() and times.local is not None:  # they may be those of the clocks on the wall
+        wrong = min(wrong, _on_the_wall(grid, time.zone)[step] != times.utc, key=np.count_nonzero)
+    if not wrong.any():
+        return ""
+    row, count = int(np.argmax(wrong)), int(np.count_nonzero(wrong))
+    are = "is not that of its step" if count == 1 else "are not those of their steps"
+    return (
+        f"{many(count, 'time')} of {len(step):,} {are}, the first {times.column.iloc[row]} in row {row}, "
+        f"step {step[row]}: {difference(grid, times, time)}"
+    )
+
+
+def difference(grid: NDArray[np.int64], times: Times, time: Any) -> str:
+    """What the grid of a spec is, and what the times are instead."""
+    seen = np.unique(times.utc)
+    zone = f", or else as {time.zone}" if times.local is not None else ""
+    count, unit = time.every
+    expected = f"expected every {count} {unit}{'s' if count > 1 and unit not in ('min', 'h', 's') else ''}"
+    same = len(seen) < 2 or len(grid) < 2 or np.array_equal(np.diff(seen)[:1], np.diff(grid)[:1])
+    got = "" if same else f"every {_length(int(np.median(np.diff(seen))))}, "
+    shift = int(seen[0] - grid[0])
+    later = f", {_length(abs(shift))} {'later' if shift > 0 else 'earlier'}" if shift else ""
+    text = f"{expected}, the first at {_stamp(grid[0])}, got {got}the first at {_stamp(seen[0])}{later}"
+    if same and shift and len(grid) > 1:
+        if abs(shift) == int(grid[1] - grid[0]):
+            text += " (one step)"
+        elif shift % 900_000_000 == 0 and abs(shift) <= _ZONES:
+            text += " (another time zone?)"
+    return text + (f"; times without a zone are read as UTC{zone}" if zone else "")
+
+
+def _on_the_wall(grid: NDArray[np.int64], zone: str) -> NDArray[np.int64]:
+    import pandas as pd
+
+    there = pd.to_datetime(grid, unit="us", utc=True).tz_convert(zone).tz_localize(None)
+    return there.to_numpy().astype("datetime64[us]").astype(np.int64)
+
+
+def _grid(time: Any, steps: int) -> NDArray[np.int64]:
+    return np.asarray(time.stamps(0, steps)).astype(np.int64)
+
+
+def _placed(grid: NDArray[np.int64], stamps: NDArray[np.int64]) -> tuple[NDArray[np.int64], NDArray[np.bool_]]:
+    step = np.searchsorted(grid, stamps)
+    return step.astype(np.int64), (step < len(grid)) & (grid[np.minimum(step, len(grid) - 1)] == stamps)
+
+
+def _stamp(microseconds: Any) -> str:
+    at = np.datetime64(int(microseconds), "us")
+    text = str(at.astype("datetime64[m]") if at == at.astype("datetime64[m]") else at)
+    return f"{text} UTC"
+
+
+def _length(microseconds: int) -> str:
+    """A length of time in the largest unit that it is a whole number of."""
+    for size, unit in _UNITS:
+        if microseconds % size == 0:
+            count = microseconds // size
+            return many(count, unit) if unit == "day" else f"{count:,} {unit}"
+    return f"{microseconds / 1e6:g} s"
