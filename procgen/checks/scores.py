@@ -53,7 +53,7 @@ class Scores:
             return z
         z = self.folded(z)
         place = (z + _REACH) * (_CELLS / (2 * _REACH))
-        cell = np.clip(place, 0, _CELLS - 1).astype(np.int64)
+        cell = np.fmin(np.fmax(place, 0.0), _CELLS - 1.0).astype(np.int64)  # what is unknown has a cell, and no score
         part = place - cell
         g = self._table[cell] + part * (self._table[cell + 1] - self._table[cell])
         far = (place < 0) | (place > _CELLS) | ~np.isfinite(g) | self._rough[cell]

@@ -11,7 +11,7 @@ from procgen.terms.combine import OF
 LONGEST = 100_000
 
 
-def _whole(name: str, value: float, what: str):
+def whole(name: str, value: float, what: str):
     if not float(value).is_integer():
         yield name, f"expected {what} in whole steps, got {number(value)} steps; choose a multiple of a step"
     elif abs(value) > LONGEST:
@@ -34,8 +34,8 @@ class Hold(Term):
 
     @classmethod
     def check(cls, values):
-        yield from _whole("every", values["every"], "a length")
-        yield from _whole("first", values["first"], "a time")
+        yield from whole("every", values["every"], "a length")
+        yield from whole("first", values["first"], "a time")
 
     def read_at(self, steps: Array) -> Array:
         """The step whose value each step has."""
@@ -76,7 +76,7 @@ class RollingMean(Term):
 
     @classmethod
     def check(cls, values):
-        yield from _whole("over", values["over"], "a window")
+        yield from whole("over", values["over"], "a window")
 
     def reach(self, head):
         return (head + int(self.over) - 1,)

@@ -8,7 +8,8 @@ from typing import Any
 
 import numpy as np
 
-from procgen.theory import known
+from procgen.theory import known, markov
+from procgen.theory.bootstrap import Blocks
 from procgen.theory.counted import Centred, Compound, Inflated
 from procgen.theory.expression import Expression, product
 from procgen.theory.known import Known
@@ -16,7 +17,7 @@ from procgen.theory.linear import At, Linear, base_of
 from procgen.theory.processes import Held, Process, alone, at_any, mean_at
 from procgen.theory.sources import Space
 from procgen.theory.unknown import Unknown
-from procgen.theory.verdict import GROWS, VARIES, judge
+from procgen.theory.verdict import CYCLES, GROWS, VARIES, judge
 
 Steps = np.ndarray
 Covariance = Callable[[Steps, Steps], np.ndarray]
@@ -37,8 +38,10 @@ class Stated(Process):
         lumpy: bool = False,
         grows: str = "",
         varies: str = "",
+        cycles: str = "",
     ):
-        says = tuple((verdict, why) for verdict, why in ((GROWS, grows), (VARIES, varies)) if why)
+        found = ((GROWS, grows), (VARIES, varies), (CYCLES, cycles))
+        says = tuple((verdict, why) for verdict, why in found if why)
         super().__init__(name, ingredients, says)
         self._covariance, self._law, self._moment = covariance, law, moment
         self.gaussian, self.discrete, self.lumpy = gaussian, discrete, lumpy or discrete
@@ -190,16 +193,32 @@ class Stating:
     def process(self, process: Process, mean: Known | None = None) -> Expression:
         raise NotImplementedError
 
-    def stated(self, key: str, driver: Any, mean: Any, covariance: Covariance, **more: Any) -> Expression:
+    def blocks(self, key: str, driver: Any, numbers: Any, size: int, circular: bool) -> Expression:
+        """Blocks of given numbers from starts that the stream `key` of a law draws; offers `block_start`."""
+        of = Blocks(numbers, size, circular)
+        why = f"a new block every {size} steps in {self.name}" if size > 1 else ""
+        mean = of.mean if np.ptp(of.means) > 0.0 else of.level
+        x = self.stated(key, driver, mean, of.covariance, period=size, moment=of.moment, lumpy=True, cycles=why)
+        (drawn,) = x.sources
+
+        def together(t: Steps, s: Steps) -> np.ndarray:
+            return np.where(t // size == s // size, (of.starts**2 - 1.0) / 12.0, 0.0)
+
+        start = Stated(self.name, drawn.detail.ingredients, together, lumpy=True, cycles=why)
+        return markov.offering(x, {"block_start": self.process(start, known.constant((of.starts - 1.0) / 2.0))})
+
+    def stated(
+        self, key: str, driver: Any, mean: Any, covariance: Covariance, period: float | None = None, **more: Any
+    ) -> Expression:
         """A process driven by the stream `key` of a law, of which all that is known is said.
 
         mean: a number, or a function of int64 steps. covariance: of two arrays of steps of one shape. Further, where
         known, `law`: function of a step, the frozen SciPy law of the value; `moment`: function (t, a, s, b) for
         E (x(t) - E x)^a (x(s) - E x)^b; `gaussian`, `discrete` (whole numbers), `lumpy` (some values have a chance of
-        their own); `grows` or `varies`: why its variance does.
+        their own); `grows` or `varies`: why its variance does; `cycles`: why it repeats every `period` steps.
         """
         if callable(mean):
-            path = known.observed(("stated", self.name), mean, self.space.horizon, self.name)
+            path = known.observed(("stated", self.name), mean, self.space.horizon, self.name, period)
         else:
             path = known.constant(float(mean))
         return self.process(Stated(self.name, (self.source(key, driver, 1.0),), covariance, **more), path)

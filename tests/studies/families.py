@@ -11,6 +11,7 @@ from typing import Any
 
 _T = {"student_t": {"df": 6}}
 _REPEAT = {"after": "repeat"}
+_RECORD = [3.1, 5.2, 4.7, 6.3, 2.8, 5.9, 7.4, 6.6, 4.2, 3.9, 5.5, 8.1, 6.4, 5.8, 4.6, 3.3, 2.1, 4.4]
 _AR = [{"ar": {"phi": 0.6, "sd": 1}}]
 
 FAMILIES: Mapping[str, Any] = {
@@ -185,6 +186,12 @@ FAMILIES: Mapping[str, Any] = {
             "b": [{"lag": {"of": [{"garch": {"sd": 1, "alpha": 0.1, "beta": 0.7}}], "by": 3}}],
             "c": [{"hold": {"of": [{"white_noise": {"sd": 3}}], "every": 8}}],
             "d": [{"sum": [{"constant": 5}, {"hold": {"of": [{"exp": _AR}], "every": 2}}]}],
+        }
+    },
+    "moving blocks": {
+        "series": {
+            "a": [{"moving_blocks": {"values": _RECORD, "length": 4}}, {"trend": {"slope": 0.1}}],
+            "b": [{"moving_blocks": {"values": _RECORD, "length": 5, "circular": True}}],
         }
     },
     "finer steps": {

@@ -49,7 +49,8 @@ RICH = {
     "scaled": "{exp: [{ar: {phi: 0.5, sd: 0.1}, times: 2}, {constant: 1}], times: 3}",
     "envelope": "{product: [{seasonal: {period: 3, profile: [1, 2, 4], centre: mean}}, {ar: {phi: 0.5, sd: 1}}]}",
 }
-NOT_ADDED = ("flag", "chain", "geometric_brownian_motion", "poisson", "negative_binomial")  # no shock added to a mean
+# no shock added to a mean
+NOT_ADDED = ("flag", "chain", "geometric_brownian_motion", "poisson", "negative_binomial", "moving_blocks")
 EXAMPLES = {kind: "{" + term.example + "}" for kind, term in catalogue().items() if kind != "use"}
 CASES = {**EXAMPLES, **RICH}
 
