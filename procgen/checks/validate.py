@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Iterable, Iterator, Mapping
+import re
+from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
+from functools import partial
 from itertools import combinations
 from pathlib import Path
 from typing import Any
@@ -24,6 +26,7 @@ from procgen.checks.structure import Precision
 from procgen.checks.verdict import Check, Verdict
 from procgen.ensemble.plan import Block
 
+_PATH = re.compile(r"\b(paths? )(\d+(?: and \d+)?)\b")
 _LONGEST = 1 << 14  # steps over which the end of a forgotten start is looked for
 
 Tick = Callable[[int, int], None]
@@ -79,8 +82,23 @@ def validate(
     if absent:  # rows that are missing are named once, not again as values that are not finite
         rows = [row for row in rows if not _only_absent(row, gather, absent)]
     for row in rows:
-        row.series = " ~ ".join(origin.columns.get(name, name) for name in row.series.split(" ~ "))
+        _as_known(row, origin)
     return Verdict(rows, false_alarm, origin.about(), origin)
+
+
+def _as_known(row: Check, origin: Any) -> None:
+    """Put the names that the reader knows in the place of ours: of series, and of the paths of a table."""
+    labels = getattr(origin, "labels", None)
+    if labels is not None and row.series and row.kind in ("structure", "law"):
+        row.note, row.probe = (_PATH.sub(partial(_labelled, labels), text) for text in (row.note, row.probe))
+    row.series = " ~ ".join(origin.columns.get(name, name) for name in row.series.split(" ~ "))
+    for name in sorted(origin.columns, key=len, reverse=True):
+        if name != origin.columns[name]:
+            row.note = row.note.replace(name, origin.columns[name])
+
+
+def _labelled(labels: Sequence[Any], match: re.Match[str]) -> str:
+    return match[1] + " and ".join(str(labels[int(number)]) for number in match[2].split(" and "))
 
 
 def _only_absent(row: Check, gather: Gather, absent: int) -> bool:

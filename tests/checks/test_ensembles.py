@@ -125,3 +125,14 @@ def test_revealed_terms_are_checked_as_series(tmp_path):
     verdict = validate(drawn, stated)
     assert verdict.agrees is False
     assert verdict.headline[0].startswith("x.noise: clustering")
+
+
+def test_reasons_name_a_revealed_term_by_its_address(tmp_path):
+    calm, wild = {"ar": {"phi": 0.2, "sd": 1}}, {"white_noise": {"sd": 4}}
+    branches, durations = {"calm": calm, "wild": wild}, {"calm": 20, "wild": 10}
+    regimes = {"regimes": {"branches": branches, "durations": durations}}
+    raw = {"procgen": 1, "seed": 4, "paths": 120, "time": {"steps": 60}, "series": {"flow": [{"constant": 3}, regimes]}}
+    verdict = validate(render(read_spec(raw), out=tmp_path / "a", reveal="all"))
+    text = verdict.to_text() + str(verdict.to_dict())
+    assert "flow.regimes" in text
+    assert "flow__" not in text

@@ -264,7 +264,7 @@ def test_semicolons_are_read_and_decimal_commas_named(frame, tmp_path):
     frame.to_csv(tmp_path / "points.csv", sep=";", index=False)
     assert validate(tmp_path / "points.csv", SPEC).agrees is True
     frame.to_csv(tmp_path / "commas.csv", sep=";", decimal=",", index=False)
-    with pytest.raises(TableError, match="x has decimal commas, the first '[-0-9]+,[0-9]+' in row 0; write numbers"):
+    with pytest.raises(TableError, match=r"x has decimal commas, the first '[-0-9]+,[0-9]+' in row 0; write numbers"):
         validate(tmp_path / "commas.csv", SPEC)
 
 
@@ -275,3 +275,12 @@ def test_of_many_columns_the_nearest_are_listed(frame):
     with pytest.raises(TableError, match=said) as error:
         validate(wide, SPEC)
     assert len(str(error.value)) < 250
+
+
+def test_paths_are_named_as_the_table_names_them(frame):
+    table = frame.assign(path="run-" + frame["path"].map("{:03d}".format))
+    table.loc[table["path"] == "run-008", "x"] = table.loc[table["path"] == "run-003", "x"].to_numpy()
+    table.loc[67, "y"] = 1e9
+    lines = "\n".join(validate(table, SPEC).headline)
+    assert "y: one value far outside what the law allows: path run-001, step 7, value 1e+09 (" in lines
+    assert "bit for bit, such as paths run-003 and run-008" in lines
