@@ -8,6 +8,7 @@ from typing import Annotated
 import typer
 
 from procgen.console import guarded, printed, progress, run, said
+from procgen.options import Settings, Start, Variant, VariantOrAll, asked, one_asked, within
 
 CONTEXT = {"help_option_names": ["-h", "--help"]}
 app = typer.Typer(
@@ -96,7 +97,8 @@ def column_of(text: str) -> tuple[str, str]:
 
 @app.command(
     short_help="Draw paths of a spec.",
-    epilog="\b\nExample:\n  procgen render specs/pump-flow.yaml -o build/pump-flow --paths 5000",
+    epilog="\b\nExamples:\n  procgen render specs/pump-flow.yaml -o build/pump-flow --paths 5000\n"
+    "  procgen render specs/cold-store.yaml --variant all -o build/cold-store",
 )
 @guarded
 def render(
@@ -110,6 +112,9 @@ def render(
         int | None, typer.Option(metavar="N", help="Number of steps, instead of the spec's.", min=1)
     ] = None,
     seed: Annotated[int | None, typer.Option(metavar="N", help="Seed, instead of the spec's.", min=0)] = None,
+    start: Start = None,
+    variant: VariantOrAll = None,
+    setting: Settings = None,
     workers: Annotated[
         int | None, typer.Option(metavar="N", help="Processes; what the size repays when absent.", min=1)
     ] = None,
@@ -139,26 +144,31 @@ def render(
     import procgen as pg
     from procgen.report.rendered import rendered
 
-    loaded = pg.load(spec)
-    with progress("drawing") as tick:
-        pg.render(
-            loaded,
-            out,
-            paths=paths,
-            first_path=first_path,
-            steps=steps,
-            seed=seed,
-            workers=workers,
-            layout=layout,
-            columns=columns,
-            partition=partition,
-            reveal=reveal,
-            resume=resume,
-            overwrite=overwrite,
-            scheduler=scheduler,
-            progress=tick,
-        )
-    printed(rendered(pg.open_ensemble(out)))
+    specs = asked(spec, variant, setting, start)
+    for name, loaded in specs.items():
+        folder = within(out, name)
+        with progress(f"drawing {name}".strip()) as tick:
+            pg.render(
+                loaded,
+                folder,
+                paths=paths,
+                first_path=first_path,
+                steps=steps,
+                seed=seed,
+                workers=workers,
+                layout=layout,
+                columns=columns,
+                partition=partition,
+                reveal=reveal,
+                resume=resume,
+                overwrite=overwrite,
+                scheduler=scheduler,
+                progress=tick,
+            )
+        printed(rendered(pg.open_ensemble(folder)))
+    if len(specs) > 1:
+        last = within(out, [*specs][-1])
+        printed(f"all have the same shocks: procgen difference {within(out, 'base')} {last} tells what differs")
 
 
 @app.command(
@@ -233,6 +243,9 @@ def picture(
             show_default=False,
         ),
     ],
+    start: Start = None,
+    variant: Variant = None,
+    setting: Settings = None,
 ) -> None:
     """Draw SPEC, with a few paths of it, or the ensemble OUT: fans, correlograms, variances, densities, quantiles.
 
@@ -240,8 +253,11 @@ def picture(
     """
     from procgen.report.pictures.draw import picture as draw
 
+    other = variant is not None or setting or start is not None
+    if other and source.is_dir():
+        raise typer.BadParameter("an ensemble is drawn as it is; give a spec with --variant, --set and --start")
     with progress("reading") as tick:
-        printed(f"picture: {draw(source, out, tick)}")
+        printed(f"picture: {draw(one_asked(source, variant, setting, start) if other else source, out, tick)}")
 
 
 @app.command(
@@ -267,12 +283,15 @@ def theory(
         tuple | None,
         typer.Option(parser=horizons_of, metavar="1,10,100", help="Steps ahead for the variances of forecast errors."),
     ] = None,
+    start: Start = None,
+    variant: Variant = None,
+    setting: Settings = None,
 ) -> None:
     """Print what SPEC implies: equations, stationarity, moments, memory, and how far it can be forecast."""
     import procgen as pg
     from procgen.report.theory import theory_json, theory_text
 
-    loaded = pg.load(spec)
+    loaded = one_asked(spec, variant, setting, start)
     printed((theory_json if json else theory_text)(loaded, pg.theory(loaded), at, lags, frequencies, horizon))
 
 

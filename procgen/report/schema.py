@@ -23,6 +23,7 @@ from procgen.terms import catalogue
 
 BODY: Schema = {"$ref": "#/$defs/body"}
 NAME: Schema = {"$ref": "#/$defs/name"}
+SETTINGS = "dotted places of this spec, each with what is to stand there, as in {series.load.ar.sd: 9, time.steps: 500}"
 
 
 def schema() -> Schema:
@@ -36,6 +37,7 @@ def schema() -> Schema:
         "groups": named(mapping_of((*TEMPLATE, *(p for p in SERIES if p.name not in ("of", "stream"))))),
         "parameters": named({"anyOf": declared()}),
         "correlation": one_or_list({"anyOf": [mapping_of(form) for form in FORMS.values()]}, 0),
+        "variants": named({"type": "object", "minProperties": 1, "description": SETTINGS}),
     }
     return {
         "$schema": "https://json-schema.org/draft/2020-12/schema",

@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
     from procgen.spec.calendar import Grid
+    from procgen.spec.variants import Written
 
 
 class Frozen(Mapping[str, Any]):
@@ -132,7 +133,7 @@ class Correlation:
 class Spec:
     """A checked spec.
 
-    `raw` is the mapping as written, anchors expanded; reading it again gives an equal Spec.
+    `raw` is the mapping as written, anchors expanded, without its variants; reading it again gives an equal Spec.
     """
 
     title: str | None
@@ -145,6 +146,37 @@ class Spec:
     raw: dict[str, Any] = field(compare=False)
     file: str | None = field(compare=False)
     parameters: Mapping[str, Any] = field(default_factory=Frozen)  # declared draws by name (`spec.varying`)
+    written: Written | None = field(compare=False, repr=False, default=None)  # what `variant` and `set` read again
+
+    @property
+    def variants(self) -> tuple[str, ...]:
+        """The names of its variants, in the order of writing."""
+        return () if self.written is None else tuple(self.written.variants)
+
+    def variant(self, name: str) -> Spec:
+        """Return a variant by its name, "base" being the spec itself; SpecError names those there are.
+
+        It has the shocks of the spec: what is drawn by the same names is the same.
+        """
+        from procgen.spec.reader import variant
+        from procgen.spec.variants import BASE, no_such
+
+        if name == BASE:
+            return self
+        if name not in self.variants:
+            raise SpecError((Fault(Place(self.file, 0, 0, "variants"), no_such(name, self.variants)),))
+        return variant(self, name)
+
+    def set(self, values: Mapping[str, Any]) -> Spec:
+        """Return this spec with other values at dotted places, as in {"series.load.swing.sd": 9, "time.steps": 500}.
+
+        Places are those of faults, or have the label of a term in the place of its number; None takes out what is
+        there. SpecError lists every fault, as of a file: places that are not there, values out of their domain.
+        """
+        from procgen.spec.reader import settled
+        from procgen.spec.variants import settings_of
+
+        return settled(self, settings_of(values))
 
     def changed(self, paths: int | None = None, steps: int | None = None, seed: int | None = None) -> Spec:
         """Return this spec with another number of paths or steps, or another seed; SpecError when out of range."""

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import copy
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from dataclasses import replace
 from pathlib import Path
 from typing import Any
@@ -12,14 +12,17 @@ from procgen.spec.calendar import Grid
 from procgen.spec.correlated import read_correlation
 from procgen.spec.declare import INVALID, Body, Choice, Parameter, Real, Text, Whole, read_each
 from procgen.spec.entries import SERIES_KEYS, read_body, read_name
-from procgen.spec.groups import read_groups
+from procgen.spec.file import text_of
+from procgen.spec.groups import OWN, read_groups
 from procgen.spec.links import Links
 from procgen.spec.model import Correlation, Entry, Fault, Frozen, Place, Series, Shared, Spec, SpecError
 from procgen.spec.parameters import Known, check_tables, read_section, read_varying
-from procgen.spec.timegrid import MOST, read_time
+from procgen.spec.places import Declared
+from procgen.spec.timegrid import MOST, TIME, read_time
 from procgen.spec.tree import TooMuch, Tree, from_data
+from procgen.spec.variants import SECTION, Setting, Written, applied, in_variant, read_variants
 from procgen.spec.varying import Varying
-from procgen.spec.yaml12 import MAX_BYTES, from_text
+from procgen.spec.yaml12 import from_text
 
 MAX_FAULTS = 200
 MAX_VALUES = 10**13  # 80 TB as float64
@@ -31,7 +34,7 @@ HEAD = (
     Parameter("seed", "", Whole(at_least=0, at_most=2**128 - 1), "the number all draws follow from"),
     Parameter("paths", "P", Whole(at_least=1, at_most=MOST), "number of paths"),
 )
-SECTIONS = ("time", "reuse", "parameters", "shared", "series", "groups", "correlation")
+SECTIONS = ("time", "reuse", "parameters", "shared", "series", "groups", "correlation", SECTION)
 SERIES = (
     Parameter("of", "", Body(), "the terms of the series"),
     Parameter("unit", "", Text(), "unit of the values, kept in the metadata of the column", default=None),
@@ -121,7 +124,7 @@ def read_text(text: str, catalogue: Mapping[str, Any], laws: Mapping[str, Any], 
 
 def read_file(path: str | Path, catalogue: Mapping[str, Any], laws: Mapping[str, Any]) -> Spec:
     """Return the Spec of a YAML file in UTF-8; SpecError when it cannot be read, or lists every fault."""
-    return read_text(_text_of(Path(path)), catalogue, laws, str(path))
+    return read_text(text_of(Path(path)), catalogue, laws, str(path))
 
 
 def read_raw(
@@ -143,17 +146,71 @@ def _read(
     laws: Mapping[str, Any],
     file: str | None,
 ) -> Spec:
-    reader = Reader(catalogue, laws)
-    reader.faults = faults
-    spec = None
-    try:
-        if tree is not None:
-            spec = _spec(tree, reader, file)
-    except TooMuch as refusal:
-        faults.append(refusal.fault)
+    spec = None if tree is None else _checked(tree, faults, catalogue, laws, file)
     if faults or spec is None:
         raise _error(faults)
     return spec
+
+
+def _checked(
+    tree: Tree, faults: list[Fault], catalogue: Mapping[str, Any], laws: Mapping[str, Any], file: str | None
+) -> Spec | None:
+    """Return the Spec of a tree, its variants tried, or None after adding every fault."""
+    reader = Reader(catalogue, laws)
+    reader.faults = faults
+    try:
+        spec = _spec(tree, reader, file)
+        variants = read_variants(tree.value[SECTION], reader) if tree.is_map and SECTION in tree.value else {}
+    except TooMuch as refusal:
+        faults.append(refusal.fault)
+        return None
+    if spec is None:
+        return None
+    spec = replace(spec, written=Written(tree, Frozen(catalogue), Frozen(laws), Frozen(variants)))
+    for name in variants:
+        _try(spec, name, reader)
+    return spec
+
+
+def _try(spec: Spec, name: str, reader: Reader) -> None:
+    """Report what is wrong with a variant, unless another has it as well."""
+    try:
+        variant(spec, name)
+    except SpecError as error:
+        for fault in error.faults:
+            if not any((fault.place.line, fault.message) == (f.place.line, f.message) for f in reader.faults):
+                reader.faults.append(in_variant(fault, name))
+
+
+def variant(spec: Spec, name: str) -> Spec:
+    """Return a variant of a spec by its name, which it has; SpecError lists every fault."""
+    return settled(spec, _written(spec).variants[name])
+
+
+def settled(spec: Spec, settings: Iterable[Setting]) -> Spec:
+    """Return the spec with other things at some places, checked anew; SpecError lists every fault."""
+    written = _written(spec)
+    kinds = written.catalogue
+    declared = Declared(kinds, _SETTABLE, _names(TIME), _names(SERIES), (*_names(SERIES), *OWN))
+    faults: list[Fault] = []
+    tree = applied(written.tree, settings, declared, faults)
+    made = _checked(tree, faults, kinds, written.laws, spec.file)
+    if faults or made is None:
+        raise _error(faults)
+    return made
+
+
+def _names(parameters: Iterable[Parameter]) -> tuple[str, ...]:
+    return tuple([parameter.name for parameter in parameters])
+
+
+_SETTABLE = tuple([p.name for p in HEAD if p.name != "procgen"] + [s for s in SECTIONS if s not in ("reuse", SECTION)])
+
+
+def _written(spec: Spec) -> Written:
+    if spec.written is None:
+        raise ValueError("this Spec was put together by hand; load a file or a mapping")
+    return spec.written
 
 
 def _error(faults: list[Fault]) -> SpecError:
@@ -193,12 +250,17 @@ def _spec(tree: Tree, reader: Reader, file: str | None) -> Spec | None:
         Frozen(shared),
         Frozen(series),
         correlation,
-        raw=tree.plain(),
+        raw=_raw(tree),
         file=file,
         parameters=Frozen(parameters),
     )
     check_tables(tree, spec, reader)
     return spec
+
+
+def _raw(tree: Tree) -> dict[str, Any]:
+    """Return a spec as plain data, without its variants."""
+    return {key: inner.plain() for key, inner in tree.value.items() if key != SECTION}
 
 
 def change(spec: Spec, **values: int) -> Spec:
@@ -213,7 +275,8 @@ def change(spec: Spec, **values: int) -> Spec:
         check_size(tree, head["paths"], grid.steps, len(spec.series), reader)
     if reader.faults or grid is None:
         raise _error(reader.faults)
-    changed = replace(spec, seed=head["seed"], paths=head["paths"], time=grid, raw=tree.plain())
+    written = spec.written and replace(spec.written, tree=tree)
+    changed = replace(spec, seed=head["seed"], paths=head["paths"], time=grid, raw=tree.plain(), written=written)
     check_tables(tree, changed, reader)
     if reader.faults:
         raise _error(reader.faults)
@@ -319,35 +382,3 @@ def _unique(tree: Tree, shared: dict[str, Shared], series: dict[str, Series], re
 def _series_key(tree: Tree, series: Series) -> Tree:
     """Return where the name of a series is written: its key, or its group."""
     return Tree(None, series.place) if series.group else tree.value["series"].key(series.name)
-
-
-def _text_of(path: Path) -> str:
-    """Return the text of a file, refusing what is too large or not UTF-8."""
-
-    def refuse(message: str) -> SpecError:
-        return SpecError((Fault(Place(str(path), 0, 0, ""), message),))
-
-    try:
-        strange = path.exists() and not path.is_file()
-        data = b"" if strange else _bytes_of(path)
-    except (OSError, ValueError) as error:
-        why = error.strerror if isinstance(error, OSError) and error.strerror else str(error)
-        raise refuse(f"cannot read the spec: {why}; check the path") from None
-    if strange:
-        raise refuse("expected a file, got a folder or a device; give the path of a YAML file")
-    if len(data) > MAX_BYTES:
-        raise refuse(f"expected a spec of at most {MAX_BYTES:,} bytes, got a larger file")
-    if data.startswith((b"\xff\xfe", b"\xfe\xff")):
-        raise refuse("expected UTF-8, got UTF-16; save the file as UTF-8")
-    try:
-        return data.decode("utf-8")
-    except UnicodeDecodeError as error:
-        line = data.count(b"\n", 0, error.start) + 1
-        column = error.start - data.rfind(b"\n", 0, error.start)
-        message = f"expected UTF-8, got the byte 0x{data[error.start]:02x}; save the file as UTF-8"
-        raise SpecError((Fault(Place(str(path), line, column, ""), message),)) from None
-
-
-def _bytes_of(path: Path) -> bytes:
-    with open(path, "rb") as file:
-        return file.read(MAX_BYTES + 1)

@@ -106,7 +106,7 @@ def test_faults_of_plain_data_have_paths():
         "expected keys that are texts, got int\n  at series\n"
         'the invisible character U+0007 is not allowed; remove it\n  at a["\\u0007"]\n'
         "unknown key a; expected one of procgen, title, seed, paths, time, reuse, parameters, shared, series, groups, "
-            "correlation\n  at a\n"
+        "correlation, variants\n  at a\n"
         "expected a number, got nothing (level: the value)\n  at series.x.constant"
     )
 
@@ -210,7 +210,8 @@ def test_large_seeds_are_kept():
          "expected the key time (steps, and a start when there are dates, as in {steps: 100})",
          "the spec (a.yaml, line 1, column 1)"),
         (HEAD + BODY + "serie: 1", "unknown key serie; expected one of procgen, title, seed, paths, time, reuse, "
-         "parameters, shared, series, groups, correlation; did you mean series?", "serie (a.yaml, line 6, column 1)"),
+         "parameters, shared, series, groups, correlation, variants; did you mean series?",
+         "serie (a.yaml, line 6, column 1)"),
         (HEAD.replace("seed: 7", "seed: 7.5") + BODY, "expected a whole number in [0, 2^128 − 1], got 7.5 "
          "(seed: the number all draws follow from)", "seed (a.yaml, line 2, column 7)"),
         (HEAD.replace("paths: 10", "paths: 1e13") + BODY, "expected a whole number in [1, 1e+12], got 10000000000000.0 "

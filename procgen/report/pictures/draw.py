@@ -8,13 +8,14 @@ from pathlib import Path
 from procgen.report.pictures import gallery as galleries
 from procgen.report.pictures.gallery import Gallery
 from procgen.report.pictures.write import PictureError, place_for, sort_of, write
+from procgen.spec.model import Spec
 
 TABLES = (".csv", ".tsv", ".parquet", ".pq", ".gz")
 Tick = Callable[[int, int], None]
 
 
-def picture(source: Path, file: Path, progress: Tick | None = None) -> Path:
-    """Draw a spec (a YAML file) or an ensemble (the folder of a render) into `file`; returns its path.
+def picture(source: Path | Spec, file: Path, progress: Tick | None = None) -> Path:
+    """Draw a spec (a YAML file, or read already) or an ensemble (the folder of a render) into `file`; returns its path.
 
     The suffix says what it becomes. A page of an ensemble has its verdict too, for which all of it is read; SVG and
     PNG show pictures only. What was in `file` is replaced.
@@ -22,6 +23,8 @@ def picture(source: Path, file: Path, progress: Tick | None = None) -> Path:
     Raises PictureError, SpecError, EnsembleError.
     """
     sort = sort_of(place_for(file))
+    if isinstance(source, Spec):
+        return _drawn(source, file, sort, progress)
     if not source.exists():
         raise PictureError(f"there is no file or folder {source}; give a spec, or the folder of a render")
     if source.suffix.lower() in TABLES and source.is_file():
@@ -29,6 +32,10 @@ def picture(source: Path, file: Path, progress: Tick | None = None) -> Path:
             f"{source} is a table and does not say what it should follow; write: "
             f"procgen validate {source} --spec SPEC --report FILE.html"
         )
+    return _drawn(source, file, sort, progress)
+
+
+def _drawn(source: Path | Spec, file: Path, sort: str, progress: Tick | None) -> Path:
     if sort == "html":
         return write(file, _page(source, progress))
     shown = _gallery(source)
@@ -42,25 +49,25 @@ def picture(source: Path, file: Path, progress: Tick | None = None) -> Path:
     return write(file, png(shown.title, lines, shown.groups))
 
 
-def _gallery(source: Path) -> Gallery:
-    if source.is_dir():
+def _gallery(source: Path | Spec) -> Gallery:
+    if not isinstance(source, Spec) and source.is_dir():
         from procgen.ensemble import open_ensemble
 
         return galleries.of_data(open_ensemble(source))
     return galleries.of_spec_alone(_spec(source))
 
 
-def _page(source: Path, progress: Tick | None) -> str:
+def _page(source: Path | Spec, progress: Tick | None) -> str:
     from procgen.report.html import verdict_page, whole_page
 
-    if not source.is_dir():
+    if isinstance(source, Spec) or not source.is_dir():
         return whole_page(galleries.of_spec_alone(_spec(source)))
     from procgen.checks.validate import validate
 
     return verdict_page(validate(source, progress=progress))
 
 
-def _spec(source: Path) -> object:
+def _spec(source: Path | Spec) -> Spec:
     from procgen.terms.given import spec_of
 
     return spec_of(source)

@@ -1,0 +1,68 @@
+"""Options that several commands have: which spec of a file is meant, and which values stand in it."""
+
+from __future__ import annotations
+
+import os
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated
+
+import typer
+
+if TYPE_CHECKING:
+    from procgen.spec.model import Spec
+
+Variant = Annotated[
+    str | None,
+    typer.Option(metavar="NAME", help="A variant that the spec has, instead of the spec as written."),
+]
+VariantOrAll = Annotated[
+    str | None,
+    typer.Option(
+        metavar="NAME|all",
+        help="A variant that the spec has; all: the spec as written in OUT/base, and each variant in OUT/NAME.",
+    ),
+]
+Settings = Annotated[
+    list[str] | None,
+    typer.Option(
+        "--set",
+        metavar="PLACE=VALUE",
+        help="What is to stand at a place, such as series.load.ar.sd=9 or time.steps=500; may be given again.",
+    ),
+]
+Start = Annotated[
+    str | None, typer.Option("--start", metavar="DATE", help="Date and time of step 0, instead of the spec's.")
+]
+
+
+def asked(
+    file: Path, variant: str | None, settings: list[str] | None = None, start: str | None = None
+) -> dict[str, Spec]:
+    """The specs meant by the options, by the name of their folder: "" alone, or base and every variant for "all".
+
+    SpecError lists every fault.
+    """
+    import procgen as pg
+    from procgen.spec.reader import settled
+    from procgen.spec.variants import ALL, BASE, all_settings, setting_of
+
+    spec = pg.load(file)
+    given = all_settings(settings or ())
+    if start is not None:
+        given = (*given, setting_of(f"time.start={start}", "--start"))
+    names = {BASE: BASE, **{name: name for name in spec.variants}} if variant == ALL else {"": variant or BASE}
+    specs = {folder: spec.variant(name) for folder, name in names.items()}
+    return {folder: settled(one, given) for folder, one in specs.items()} if given else specs
+
+
+def one_asked(file: Path, variant: str | None, settings: list[str] | None, start: str | None) -> Spec:
+    """The one spec meant by the options; a variant called "all" is none. SpecError lists every fault."""
+    import procgen as pg
+    from procgen.spec.variants import ALL
+
+    return pg.load(file).variant(ALL) if variant == ALL else asked(file, variant, settings, start)[""]
+
+
+def within(out: str, name: str) -> str:
+    """The folder of one of several ensembles; OUT itself where there is no name."""
+    return os.path.join(out, name) if name and out else out
