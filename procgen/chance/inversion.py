@@ -109,7 +109,7 @@ def _fit(areas: Areas, left: np.ndarray, width: np.ndarray) -> tuple[np.ndarray,
     nodes = -cos_turns(np.arange(_DEGREE + 1) / (2 * _DEGREE))
     tests = -cos_turns((np.arange(_DEGREE) + 0.5) / (2 * _DEGREE))
     points = areas.point((left + width * ((nodes[:, None] + 1) * 0.5)).reshape(-1))
-    pieces = _interpolation(nodes, list(points.reshape(len(nodes), -1)))
+    pieces = interpolation(nodes, list(points.reshape(len(nodes), -1)))
     t = tests[:, None]
     x = pieces[0] + 0.0 * t
     for piece in pieces[1:]:
@@ -127,7 +127,7 @@ def _line(areas: Areas, left: np.ndarray, width: np.ndarray) -> np.ndarray:
     return piece
 
 
-def _interpolation(nodes: np.ndarray, values: list[np.ndarray]) -> list[np.ndarray]:
+def interpolation(nodes: np.ndarray, values: list[np.ndarray]) -> list[np.ndarray]:
     """Coefficients, highest power first, of the polynomials through values at nodes: Newton's divided differences."""
     count = len(nodes)
     differences = list(values)

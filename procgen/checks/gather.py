@@ -21,6 +21,7 @@ from procgen.checks.special import EventSums
 from procgen.checks.squares import Squares, SquareSums
 from procgen.checks.structure import Precision, Structure
 from procgen.checks.sums import Kept, Moments, Powers
+from procgen.checks.tied import TiedSums
 
 
 @dataclass
@@ -70,6 +71,11 @@ class Plan:
             self.routes[name].allow(variance)  # type: ignore[union-attr]
 
 
+def sums_of(stated: Expected) -> CrossSums:
+    """The sums that a pair of series is judged by."""
+    return CrossSums() if stated.tie is None else TiedSums(stated.same_sides)
+
+
 def _joined(arrays: Sequence[NDArray]) -> NDArray:
     return np.concatenate([values.ravel() for values in arrays])
 
@@ -103,7 +109,7 @@ class Gather:
         self.errors = {name: ErrorSums() for name in self.routes if name not in scores}
         self.events = {name: EventSums(way.watched) for name, way in self.routes.items() if way.watched}
         self.squares = {name: SquareSums(each) for name, each in plan.squares.items()}
-        self.cross = {pair: CrossSums() for pair in plan.shock_pairs}
+        self.cross = {pair: sums_of(stated) for pair, stated in plan.shock_pairs.items()}
 
     def finish_lane(self, first_path: int, probes: NDArray, pools: Sequence[NDArray], prints: NDArray) -> None:
         """Take what a lane has kept by path: values at probes, averages over steps, fingerprints (paths, series)."""

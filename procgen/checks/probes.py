@@ -343,4 +343,4 @@ def _cross_pair(plans: Sequence[SeriesPlan], i: int, j: int, theory: Any) -> Cro
         value = theory.covariance(a.steps[p : p + 1], b.steps[q : q + 1])
         reason = reason or (theory.reason() or "" if value is None else "")
         values.append(None if value is None else float(np.ravel(value)[0]))
-    return CrossPlan(i, j, tuple(places), tuple(values), reason, a.gaussian and b.gaussian)
+    return CrossPlan(i, j, tuple(places), tuple(values), reason, bool(theory.gaussian))

@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 
 from procgen.checks.kalman import Kalman
 from procgen.checks.scores import Scores
+from procgen.checks.tied import shock_of
 
 LARGEST_STATE = 300  # elements of the state up to which a Kalman filter is run
 SMALL_STATE = 64  # up to here it is preferred to undoing: it also knows how the series starts
@@ -201,12 +202,22 @@ def _kalman(system: Any, row: int, rounding: float) -> Kalman:
 class Expected:
     """Correlations of the shocks of two series: `at[lag]` is that of the first at t with the second at t - lag.
 
-    They hold from step `ready` on; `unknown` says why they are not known.
+    They hold from step `ready` on; `unknown` says why they are not known. `tie` is what ties shocks that are not
+    jointly normal, `oriented` the same with signs turned so that they tend to go together.
     """
 
     at: dict[int, float] = field(default_factory=dict)
     ready: int = 0
     unknown: str = ""
+    tie: Any = None
+
+    @property
+    def same_sides(self) -> bool:
+        return self.at.get(0, 0.0) >= 0.0
+
+    @property
+    def oriented(self) -> Any:
+        return self.tie if self.tie.rho >= 0.0 else self.tie.turned()
 
 
 def expected(a: Route, b: Route, space: Any) -> Expected:
@@ -218,6 +229,8 @@ def expected(a: Route, b: Route, space: Any) -> Expected:
         return Expected()
     if a.ranked is not None or b.ranked is not None:
         return Expected(unknown="what the ranks of two dependent series have in common is not computed")
+    if space.tied(left, right):
+        return _of_tied(a, b, space)
     if a.kalman is None and b.kalman is None:
         return Expected({0: space.normal_correlation(left[0], right[0])})
     if a.kalman is not None and b.kalman is not None:
@@ -225,6 +238,16 @@ def expected(a: Route, b: Route, space: Any) -> Expected:
     if a.kalman is None:
         return _mirrored(_of_filter_and_source(b, left[0], space))
     return _of_filter_and_source(a, right[0], space)
+
+
+def _of_tied(a: Route, b: Route, space: Any) -> Expected:
+    """Two shocks of one step that are not jointly normal."""
+    one, other = shock_of(a), shock_of(b)
+    if one is None or other is None:
+        why = "their shocks are not jointly normal: what their prediction errors have in common is not computed"
+        return Expected(unknown=why)
+    tie = space.tie(space.sources[one[0]], space.sources[other[0]])
+    return Expected({0: one[1] * other[1] * tie.scores[0]}, max(one[2], other[2]), tie=tie)
 
 
 def _sources(r: Route, space: Any) -> list[Any] | None:

@@ -23,6 +23,7 @@ from procgen.checks.recover import Cannot, Expected, Route, expected, route
 from procgen.checks.special import lumpy
 from procgen.checks.squares import plan_squares
 from procgen.checks.structure import Precision
+from procgen.checks.tied import tied_checks
 from procgen.checks.verdict import Check, Verdict
 from procgen.ensemble.plan import Block
 
@@ -189,6 +190,8 @@ def judged(gather: Gather) -> Iterator[Check]:
             yield Check(
                 name, "shocks: correlation between series", "", "dependence", outcome="untestable", note=stated.unknown
             )
+        elif stated.tie is not None:
+            yield from tied_checks(name, sums, stated)
         else:
             yield from cross_checks(name, sums, stated.at)
 

@@ -227,8 +227,21 @@ def _correlated(entries: Iterable[dict[str, Any]]) -> list[str]:
             f"of the values {number(values)}" if values is not None else f"of the values unknown: {entry['reason']}"
         )
         text = f"{entry['leader']} leads {entry['follower']}: correlation of the normals {number(entry['normals'])}, "
-        lines += _wrapped([text + implied])
+        lines += _wrapped([text + implied + _tails(entry)])
     return ["", "shocks that go together", *lines] if lines else []
+
+
+def _tails(entry: dict[str, Any]) -> str:
+    """How often both are far out together, where that is not what normals do."""
+    if "copula" not in entry:
+        return ""
+    tails = entry["joint_tail"]
+    chances = [number(float(f"{tails[name]:.3g}")) for name in ("chance", "normal")]
+    share = f"{tails['share']:.0%}"
+    return (
+        f"; {entry['copula']}: when one is in its lowest {share}, so is the other with probability {chances[0]} "
+        f"({chances[1]} under a normal copula)"
+    )
 
 
 def _repaired(spec: Spec) -> list[str]:

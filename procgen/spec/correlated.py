@@ -7,6 +7,7 @@ from typing import Any
 
 import numpy as np
 
+from procgen.spec.copulas import COPULA, Ties
 from procgen.spec.declare import INVALID, Domain, Flag, Parameter, Reading, Real, Reals, Records, Schema, read_each
 from procgen.spec.domains import one_or_list
 from procgen.spec.links import Links
@@ -61,7 +62,7 @@ class Matrix(Domain):
 
 
 _VALUE = Parameter("value", "ρ", Real(above=-1.0, below=1.0), "correlation of the primary normals")
-FORMS = {
+_FORMS: dict[str, tuple[Parameter, ...]] = {
     "between": (Parameter("between", "", Names(exactly=2), "the two that are correlated"), _VALUE),
     "within": (Parameter("within", "", Names(), "names of which any two are correlated alike"), _VALUE),
     "matrix": (
@@ -84,6 +85,7 @@ FORMS = {
         Parameter("across", "ρ", Real(above=-1.0, below=1.0), "correlation of any two of different groups", 0.0),
     ),
 }
+FORMS = {form: (*parameters, COPULA) for form, parameters in _FORMS.items()}
 WAYS = (
     "{between: [a.x, b.y], value: 0.3}, {within: […], value: 0.3}, {names: […], matrix: […]}, "
     "{names: […], loadings: […]} or {blocks: [{names: […], value: 0.5}, …], across: 0.1}"
@@ -111,7 +113,8 @@ def read_correlation(tree: Tree, links: Links, reader: Reading) -> Correlation:
             "bring the values nearer to 0, or to each other" + _offer(items),
         )
         return Correlation()
-    return Correlation(tuple(pairs.order), tuple(tuple(map(float, row)) for row in matrix))
+    copulas = pairs.ties.joined(tuple(pairs.order), reader)
+    return Correlation(tuple(pairs.order), tuple(tuple(map(float, row)) for row in matrix), copulas)
 
 
 def _offer(items: Sequence[Tree]) -> str:
@@ -165,6 +168,7 @@ class _Pairs:
         self.reader = reader
         self.order: dict[str, int] = {}
         self.values: dict[tuple[int, int], float] = {}
+        self.ties = Ties()
 
     def name(self, tree: Tree) -> int | None:
         """Return the number of a name in order of first appearance, or None after a fault."""
@@ -221,6 +225,7 @@ def _read_item(tree: Tree, pairs: _Pairs, reader: Reading) -> None:
     if names is None:
         return
     places = [pairs.name(name) for name in names]
+    pairs.ties.add(names, values["copula"], tree)
     rows = _rows(forms[0], tree, values, len(names), reader) if len(reader.faults) == before else None
     for i, first in enumerate(places if rows else []):
         for j in range(i + 1, len(places)):

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import json
-from collections.abc import Iterator, Mapping
+from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Any
 
@@ -122,11 +122,33 @@ class Shared:
 
 
 @dataclass(frozen=True)
+class Copula:
+    """Names ("series.label") whose shocks are tied by a t copula of `df` degrees of freedom."""
+
+    names: tuple[str, ...]
+    df: float
+
+
+@dataclass(frozen=True)
 class Correlation:
-    """Correlation of the primary normals of `names` ("series.label"), in order of first appearance."""
+    """Correlation of the primary normals of `names` ("series.label"), in order of first appearance.
+
+    Under one of the `copulas` it is that of the t variables which take the place of the normals.
+    """
 
     names: tuple[str, ...] = ()
     matrix: tuple[tuple[float, ...], ...] = ()
+    copulas: tuple[Copula, ...] = ()
+
+    def among(self, wanted: Callable[[str], bool]) -> Correlation:
+        """Return what it says of some of the names."""
+        kept = [i for i, name in enumerate(self.names) if wanted(name)]
+        copulas = [Copula(tuple([name for name in c.names if wanted(name)]), c.df) for c in self.copulas]
+        return Correlation(
+            tuple([self.names[i] for i in kept]),
+            tuple([tuple([self.matrix[i][j] for j in kept]) for i in kept]),
+            tuple([copula for copula in copulas if len(copula.names) > 1]),
+        )
 
 
 @dataclass(frozen=True)

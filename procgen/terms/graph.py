@@ -7,18 +7,17 @@ normals are correlated form a `Group`, mixed in the order of the spec's `correla
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 
-from procgen.chance.laws import Normal
-from procgen.chance.portable import cholesky
 from procgen.chance.streams import Stream
 from procgen.spec.model import Entry, Fault, Place, Spec, SpecError
 from procgen.terms import catalogue
 from procgen.terms.base import Array, Node, Term
 from procgen.terms.combine import Hidden, Scaled, Sum
+from procgen.terms.mixing import Group
 from procgen.terms.noise import WhiteNoise
 from procgen.terms.start import JointStart
 from procgen.terms.varied import Varied
@@ -36,18 +35,6 @@ class Source:
     pace: int = 1
 
     inputs = ()
-
-
-@dataclass(eq=False)
-class Group:
-    """Sources whose primary normals are correlated, leader first, with the lower factor that mixes them."""
-
-    sources: tuple[Source, ...]
-    matrix: Array
-    factor: Array = field(init=False)
-
-    def __post_init__(self):
-        self.factor = cholesky(self.matrix)
 
 
 class Graph:
@@ -253,9 +240,13 @@ class Graph:
 
     def _correlate(self) -> None:
         names, matrix = self.spec.correlation.names, np.array(self.spec.correlation.matrix, dtype=np.float64)
-        sources = [self.source_of(name) for name in names]
-        for linked in _components(matrix):
-            group = Group(tuple(sources[i] for i in linked), matrix[np.ix_(linked, linked)])
+        sources, linking, degrees = [self.source_of(name) for name in names], matrix != 0.0, {}
+        for copula in self.spec.correlation.copulas:
+            tied = [names.index(name) for name in copula.names]
+            linking[np.ix_(tied, tied)] = True
+            degrees[tied[0]] = copula.df
+        for linked in _components(linking):
+            group = Group(tuple(sources[i] for i in linked), matrix[np.ix_(linked, linked)], degrees.get(linked[0]))
             self.groups.append(group)
             for source in group.sources:
                 source.group = group
@@ -301,6 +292,8 @@ class Graph:
             chosen.append(i)
         if not any(m is not None and m.phi for m in members) or not all(exact for _, exact, _ in nodes):
             return
+        if sources[0].group is not None and not sources[0].group.gaussian:
+            return  # each alone is Gaussian, but not their past together
         matrix = sources[0].group.matrix if sources[0].group else np.ones((1, 1))
         joint = JointStart(members, matrix[np.ix_(chosen, chosen)])
         for i, (node, _, _) in enumerate(nodes):
@@ -346,9 +339,6 @@ def build(spec: Spec) -> Graph:
     return graph
 
 
-NORMAL = Normal()
-
-
 def _too_slow(node: Node, error: ValueError) -> str:
     return (
         f"{node.name} begins with a burn-in, because its shocks are not Gaussian, and {error}; give `before`, a "
@@ -386,13 +376,13 @@ def _walk(entries: tuple[Entry, ...]) -> Iterator[Entry]:
             yield from _walk(body)
 
 
-def _components(matrix: Array) -> list[list[int]]:
-    """Index sets linked by non-zero correlations, each in order, singletons left out."""
-    left, found = list(range(len(matrix))), []
+def _components(linking: Array) -> list[list[int]]:
+    """Index sets of which one leads to the other by links, each in order, singletons left out."""
+    left, found = list(range(len(linking))), []
     while left:
         linked = {left[0]}
         while True:
-            more = {j for i in linked for j in left if matrix[i, j] != 0.0} | linked
+            more = {j for i in linked for j in left if linking[i, j]} | linked
             if more == linked:
                 break
             linked = more

@@ -14,8 +14,8 @@ import numpy as np
 from procgen.chance.streams import Stream
 from procgen.terms.base import Array, Before, Node, State
 from procgen.terms.combine import Hidden
-from procgen.terms.graph import NORMAL, Graph, Group, Source
-from procgen.terms.start import weigh
+from procgen.terms.graph import Graph, Source
+from procgen.terms.mixing import NORMAL, Group
 
 
 class Run:
@@ -106,14 +106,7 @@ class Run:
 
     def _mixed(self, group: Group, first_step: int, steps: int) -> list[Array]:
         uniforms = [s.stream.uniforms(self.first_path, self.paths, first_step, steps) for s in group.sources]
-        normals = [NORMAL.shocks(u) for u in uniforms]
-        mixed = weigh(group.factor, normals)
-        leads = [np.count_nonzero(weights) == 1 for weights in group.factor]
-        # A leader's shocks come straight from its uniforms, so that being named moves nothing.
-        return [
-            s.law.shocks(u) if lead else s.law.shocks_from_normals(z)
-            for s, u, z, lead in zip(group.sources, uniforms, mixed, leads, strict=True)
-        ]
+        return group.shocks(uniforms)
 
     # before step 0
 

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from functools import lru_cache
+from collections.abc import Iterator
+from functools import cache, lru_cache
 from typing import Any
 
 import numpy as np
@@ -65,15 +66,35 @@ def hermite_coefficients(law: Any) -> np.ndarray:
     """c_k = E q(z) He_k(z) / sqrt(k!), k < TERMS: by Gauss-Legendre panels that meet at 0, where some laws bend."""
     if law.gaussian:
         return np.eye(1, TERMS, 1)[0]
+    z, weights = _panels()
+    weighted = weights * quantiles_of_normals(law, z)
+    out = np.empty(TERMS)
+    for k, now in enumerate(_hermite(z)):
+        out[k] = weighted @ now
+    return out
+
+
+@cache
+def hermite_basis() -> tuple[np.ndarray, np.ndarray]:
+    """Points z, and rows (TERMS, points) whose products with f(z) are the coefficients of f."""
+    z, weights = _panels()
+    return z, np.array(list(_hermite(z))) * weights
+
+
+def _panels() -> tuple[np.ndarray, np.ndarray]:
+    """Points, and weights under the normal density."""
     nodes, weights = np.polynomial.legendre.leggauss(16)
     edges = np.arange(0.0, WIDEST, PANEL)
     half = (edges[:, None] + PANEL * (nodes + 1.0) / 2.0).ravel()
     z = np.concatenate([-half[::-1], half])
     mass = np.tile(weights * PANEL / 2.0, len(edges))
     density = np.exp(-0.5 * z * z) / np.sqrt(2.0 * np.pi)
-    weighted = np.concatenate([mass[::-1], mass]) * density * quantiles_of_normals(law, z)
-    before, now, out = np.zeros_like(z), np.ones_like(z), np.empty(TERMS)
+    return z, np.concatenate([mass[::-1], mass]) * density
+
+
+def _hermite(z: np.ndarray) -> Iterator[np.ndarray]:
+    """He_k(z) / sqrt(k!) for k < TERMS."""
+    before, now = np.zeros_like(z), np.ones_like(z)
     for k in range(TERMS):
-        out[k] = weighted @ now
+        yield now
         before, now = now, (z * now - np.sqrt(k) * before) / np.sqrt(k + 1.0)
-    return out

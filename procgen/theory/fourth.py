@@ -78,7 +78,7 @@ def _lognormal_spread(x: Expression, at: np.ndarray) -> float | None:
     if x.linear or len(x.terms) != 1:
         return None
     (term,) = x.terms
-    if term.factors or term.summed or not all(source.gaussian for source in term.sources):
+    if term.factors or term.summed or not x.space.gaussian(term.sources):
         return None
     g = Expression(x.space, known.constant(0.0), term.exponent)
     return float(g.covariance(g, at, at)[0])

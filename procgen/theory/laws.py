@@ -17,7 +17,12 @@ from procgen.theory.unknown import Unknown
 def is_gaussian(x: Expression) -> bool:
     """Whether the values at any steps are jointly Gaussian (a known series counts as such)."""
     linear = all(len(t.factors) == 1 and not t.exponent and t.summed is None for t in x.terms)
-    return linear and all(source.gaussian for source in x.sources)
+    return linear and x.space.gaussian(x.sources)
+
+
+def jointly_gaussian(x: Expression, y: Expression) -> bool:
+    """Whether the values of two series at any steps are jointly Gaussian."""
+    return is_gaussian(x) and is_gaussian(y) and x.space.gaussian(x.sources | y.sources)
 
 
 def marginal(x: Expression, step: int) -> Any:
@@ -101,7 +106,7 @@ class Affine:
 def _lognormal(space: Space, term: Term, scale: float, level: float, at: np.ndarray) -> Any:
     from scipy import stats
 
-    if term.factors or term.summed or not all(source.gaussian for source in term.sources):
+    if term.factors or term.summed or not space.gaussian(term.sources):
         raise Unknown("a product, or an exponential of what is not Gaussian, has no closed law")
     variance = float(covariance(space, term.exponent, term.exponent, at, at)[0])
     if variance <= 0.0:
@@ -134,4 +139,5 @@ def _order(source: Source) -> float:
 
 
 def _names(x: Expression) -> str:
-    return ", ".join(source.owner.key if source.owner else source.key for source in x.sources if not source.gaussian)
+    behind = [source.owner or source for source in x.sources]
+    return ", ".join(source.key for source in [s for s in behind if not s.gaussian] or behind)

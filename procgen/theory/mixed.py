@@ -37,7 +37,8 @@ class MixedTheory(Theory):
             return super().cross(first, second)
         if not self._go_together(first, second):
             return Independent(self[first], self[second])
-        return MixedCross(self[first], self[second], self._mixture(first, second))
+        joint = self._typical.cross(first, second).gaussian
+        return MixedCross(self[first], self[second], self._mixture(first, second), joint)
 
     def _go_together(self, a: str, b: str) -> bool:
         return bool(self._used[a] & self._used[b]) or self._typical._go_together(a, b)
@@ -58,6 +59,10 @@ def _given(spec: Spec) -> Theory:
 class Independent(CrossTheory):
     """Two series that have neither chance nor drawn parameters in common."""
 
+    @property
+    def gaussian(self) -> bool:
+        return self.first.gaussian and self.second.gaussian
+
     def covariance(self, t, s):
         return np.zeros(np.broadcast_shapes(_steps(t).shape, _steps(s).shape))
 
@@ -65,9 +70,13 @@ class Independent(CrossTheory):
 class MixedCross(CrossTheory):
     """Exact covariances between two series that have parameters drawn by path."""
 
-    def __init__(self, first: SeriesTheory, second: SeriesTheory, mixture: Mixture):
+    def __init__(self, first: SeriesTheory, second: SeriesTheory, mixture: Mixture, joint: bool):
         super().__init__(first, second)
-        self.mixture = mixture
+        self.mixture, self._joint = mixture, joint
+
+    @property
+    def gaussian(self) -> bool:
+        return self.first.gaussian and self.second.gaussian and self._joint
 
     def covariance(self, t, s):
         t, s = np.broadcast_arrays(_steps(t), _steps(s))

@@ -165,14 +165,16 @@ class Hinged(Process):
     def with_expression(self, other, t, s):
         from scipy.stats import norm
 
-        from procgen.theory.laws import is_gaussian
+        from procgen.theory.laws import jointly_gaussian
 
-        if not is_gaussian(other):
+        if not jointly_gaussian(self.body, other):
             return super().with_expression(other, t, s)
         return at_any(self.body, other, t, s) * norm.sf(self.spread(t)[1])  # Stein (1981)
 
     def with_process(self, own, other, t, s):
-        if isinstance(other.detail, Hinged):
+        if isinstance(other.detail, Hinged) and self.body.space.gaussian(
+            self.body.sources | other.detail.body.sources
+        ):
             return self.crossed(other.detail, t, s)
         if isinstance(other.detail, Held):
             return other.detail.with_expression(alone(self.body.space, own), s, t)
@@ -207,9 +209,9 @@ class Curved(Process):
         return total
 
     def with_expression(self, other, t, s):
-        from procgen.theory.laws import is_gaussian
+        from procgen.theory.laws import jointly_gaussian
 
-        if not is_gaussian(other):
+        if not jointly_gaussian(self.body, other):
             return super().with_expression(other, t, s)
         u = self._sd(t)
         with np.errstate(divide="ignore", invalid="ignore"):

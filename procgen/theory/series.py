@@ -306,6 +306,11 @@ class CrossTheory:
         self.first, self.second = first, second
         self._reason: str | None = None
 
+    @property
+    def gaussian(self) -> bool:
+        """Whether the values of both at any steps are jointly Gaussian."""
+        return laws.jointly_gaussian(self.first.expression, self.second.expression)
+
     def covariance(self, t, s) -> np.ndarray | None:
         """Cov(first(t), second(s)); t and s broadcast against each other; None with `reason` where unknown."""
         try:

@@ -13,7 +13,8 @@ from typing import Any
 import numpy as np
 
 from procgen.theory.chains import Switching
-from procgen.theory.copula import is_symmetric, law_correlation
+from procgen.theory.copula import is_symmetric
+from procgen.theory.ties import NormalTie, Tie
 from procgen.theory.unknown import Unknown
 
 IID, GARCH, SQUARES, OPAQUE, PROCESS = "independent", "garch", "squares", "opaque", "process"
@@ -73,6 +74,7 @@ class Space:
     sources: dict[str, Source] = field(default_factory=dict)
     origins: dict[Any, str] = field(default_factory=dict)  # where a running sum was written, by its key
     last: dict[Any, Any] = field(default_factory=dict)  # the state space that was asked last, by its forms
+    ties: Mapping[frozenset[str], Tie] = field(default_factory=dict)  # of those that are not jointly normal
 
     def add(self, source: Source) -> Source:
         if source.key in self.sources:
@@ -89,7 +91,24 @@ class Space:
         if a is b:
             return True
         left, right = roots(a), roots(b)
-        return any(self.normal_correlation(x, y) != 0.0 for x in left for y in right)
+        return any(self.normal_correlation(x, y) != 0.0 for x in left for y in right) or self.tied((a,), (b,))
+
+    def tie(self, a: Source, b: Source) -> Tie | None:
+        """What ties the shocks of two sources, where they are not jointly normal."""
+        return self.ties.get(frozenset(((a.owner or a).key, (b.owner or b).key)))
+
+    def tied(self, left: Iterable[Source], right: Iterable[Source]) -> bool:
+        """Whether a primary source behind the ones is tied to one behind the others, in another way than by normals."""
+        if not self.ties:
+            return False
+        return any(self.tie(x, y) is not None for a in left for b in right for x in roots(a) for y in roots(b))
+
+    def gaussian(self, sources: Iterable[Source]) -> bool:
+        """Whether sources are jointly Gaussian: each is, and no two are tied in another way."""
+        listed = list(sources)
+        if not all(source.gaussian for source in listed):
+            return False
+        return not self.tied(listed, listed)
 
     def components(self, sources: Iterable[Source]) -> list[list[Source]]:
         """Sources grouped so that distinct groups are independent, in order of first appearance."""
@@ -128,7 +147,8 @@ class Space:
 
     def law_correlation(self, a: Source, b: Source) -> tuple[float, float]:
         """Correlation of the values of two independent-in-time sources, and a bound on its numerical error."""
-        return law_correlation(a.law, b.law, self.normal_correlation(a, b))
+        tie = self.tie(a, b) or NormalTie(self.normal_correlation(a, b))
+        return tie.law_correlation(a.law, b.law)
 
     def _with_squares(self, a: Source, b: Source) -> float:
         if a.owner and b.owner:

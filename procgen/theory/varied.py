@@ -17,7 +17,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.spec.entries import walk
-from procgen.spec.model import Correlation, Frozen, Series, Shared, Spec
+from procgen.spec.model import Frozen, Series, Shared, Spec
 from procgen.spec.varying import varying_of
 from procgen.theory.quadrature import exact, rule
 from procgen.theory.unknown import Unknown
@@ -126,13 +126,11 @@ def part(spec: Spec, names: Iterable[str]) -> Spec:
             wanted.add(owner)
             uses = [entry for entry, _ in walk(bodies[owner].of) if entry.kind == "use"]
             left += [entry.values["name"].partition(".")[0] for entry in uses]
-    kept = [i for i, name in enumerate(spec.correlation.names) if name.partition(".")[0] in wanted]
-    matrix = tuple(tuple(spec.correlation.matrix[i][j] for j in kept) for i in kept)
     return replace(
         spec,
         series=Frozen({name: one for name, one in spec.series.items() if name in wanted}),
         shared=Frozen({name: one for name, one in spec.shared.items() if name in wanted}),
-        correlation=Correlation(tuple(spec.correlation.names[i] for i in kept), matrix),
+        correlation=spec.correlation.among(lambda name: name.partition(".")[0] in wanted),
     )
 
 

@@ -14,12 +14,18 @@ from procgen.theory.axis import Axis
 from procgen.theory.expression import Expression, opaque
 from procgen.theory.series import FREQUENCIES, HORIZONS, CrossTheory, SeriesTheory, plain
 from procgen.theory.sources import GARCH, Source
+from procgen.theory.ties import NormalTie, StudentTie, Tie
 from procgen.theory.unknown import Unknown
+
+TAIL = 0.01  # the share in which joint tails are told
 
 
 @dataclass(frozen=True)
 class Correlated:
-    """One correlated pair: of its primary normals, and of its values where that is exact (else None and why)."""
+    """One correlated pair: of its primary normals, and of its values where that is exact (else None and why).
+
+    `copula` says what ties it where that is not the normal copula.
+    """
 
     leader: str
     follower: str
@@ -27,6 +33,21 @@ class Correlated:
     values: float | None
     tolerance: float | None = None
     reason: str | None = None
+    copula: str = ""
+    tie: Tie | None = None
+
+    def joint_tail(self, share: float = TAIL) -> float:
+        """How often the follower's shock is in its lowest `share`, of the times when the leader's is there."""
+        return (self.tie or NormalTie(self.normals)).joint_tail(share) / share
+
+    def as_dict(self) -> dict[str, Any]:
+        """What `procgen theory --json` prints of it."""
+        told = {"leader": self.leader, "follower": self.follower, "normals": self.normals, "values": self.values}
+        told |= {"tolerance": self.tolerance} if self.reason is None else {"reason": self.reason}
+        if self.tie is None:
+            return told
+        tails = {"share": TAIL, "chance": self.joint_tail(), "normal": NormalTie(self.normals).joint_tail(TAIL) / TAIL}
+        return told | {"copula": self.copula, "joint_tail": tails}
 
 
 @dataclass
@@ -62,15 +83,16 @@ class Theory(Mapping[str, SeriesTheory]):
 
     def _correlated(self, a: Source, b: Source) -> Correlated:
         names = ((a.owner or a).key, (b.owner or b).key)
-        normals = self.axis.space.normal_correlation(a, b)
+        normals, tie = self.axis.space.normal_correlation(a, b), self.axis.space.tie(a, b)
+        copula = "" if tie is None else str(tie)
         try:
             covariance = self.axis.space.covariance(a, b) if GARCH in (a.kind, b.kind) else None
+            value, tolerance = self.axis.space.law_correlation(a, b)
         except Unknown as unknown:
-            return Correlated(*names, normals, None, reason=unknown.reason)
-        value, tolerance = self.axis.space.law_correlation(a, b)
+            return Correlated(*names, normals, None, reason=unknown.reason, copula=copula, tie=tie)
         if covariance is not None:
             value = covariance / float(np.sqrt(a.variance * b.variance))
-        return Correlated(*names, normals, value, tolerance)
+        return Correlated(*names, normals, value, tolerance, None, copula, tie)
 
     def as_dict(
         self,
@@ -82,12 +104,7 @@ class Theory(Mapping[str, SeriesTheory]):
         """What `procgen theory --json` prints."""
         series = {name: theory.as_dict(at, lags, frequencies, horizons) for name, theory in self.series.items()}
         cross = [entry for a, b in combinations(self.series, 2) if (entry := self._cross_entry(a, b, at))]
-        correlation = [
-            {"leader": c.leader, "follower": c.follower, "normals": c.normals, "values": c.values}
-            | ({"tolerance": c.tolerance} if c.reason is None else {"reason": c.reason})
-            for c in self.correlated
-        ]
-        return {"series": series, "cross": cross, "correlation": correlation}
+        return {"series": series, "cross": cross, "correlation": [pair.as_dict() for pair in self.correlated]}
 
     def _go_together(self, a: str, b: str) -> bool:
         """Whether something random is behind both series, or correlated."""
@@ -134,6 +151,11 @@ def theory(spec: Any, graph: Any = None) -> Theory:
         if matrix[i][j]
     }
     axis = Axis(spec.time.steps * graph.pace, correlation)
+    axis.space.ties = {
+        frozenset(pair): StudentTie(copula.df, correlation.get(frozenset(pair), 0.0))
+        for copula in spec.correlation.copulas
+        for pair in combinations(copula.names, 2)
+    }
     memo: dict[int, Expression] = {}
     series = {name: SeriesTheory(name, _moments(axis, graph.series[name], memo)) for name in spec.series}
     return Theory(series, tuple(names), axis, graph)

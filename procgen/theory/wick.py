@@ -67,8 +67,9 @@ def mean(space: Space, factors: Sequence[Linear], exponent: Linear, t: np.ndarra
 def _groups(space: Space, sources: dict[Source, None]) -> list[list[Source]]:
     """Independent groups, all wholly Gaussian ones as one: independent Gaussians are jointly Gaussian."""
     groups = space.components(sources)
-    gaussian = [source for g in groups if all(x.gaussian for x in g) for source in g]
-    rest = [g for g in groups if not all(x.gaussian for x in g)]
+    normal = [space.gaussian(g) for g in groups]
+    gaussian = [source for g, is_normal in zip(groups, normal, strict=True) if is_normal for source in g]
+    rest = [g for g, is_normal in zip(groups, normal, strict=True) if not is_normal]
     return ([gaussian] if gaussian else []) + rest
 
 
@@ -90,7 +91,7 @@ def _group(space, group, factors, tilts, t, s) -> Pair:
     if not factors and not any(tilts):
         return np.ones(t.shape), np.zeros(t.shape)
     _refuse_uncentred(group)
-    if all(source.gaussian for source in group):
+    if space.gaussian(group):
         return _gaussian(space, factors, tilts, t, s)
     return _few_moments(space, group, factors, tilts, t, s)
 
@@ -178,4 +179,4 @@ def _refuse_uncentred(sources) -> None:
 
 
 def _names(group: Sequence[Source]) -> str:
-    return ", ".join(dict.fromkeys(source.called for source in group if not source.gaussian))
+    return ", ".join(dict.fromkeys(s.called for s in [s for s in group if not s.gaussian] or group))

@@ -157,3 +157,59 @@ def test_without_the_request_it_is_refused_with_the_offer():
 def test_more_faults(text, message):
     (found,) = correlation_faults(text)
     assert found.startswith(message)
+
+
+T4 = "copula: {student_t: {df: 4}}"
+
+
+@pytest.mark.parametrize(
+    "item",
+    [
+        "{between: [a.white_noise, b.swing], value: 0.3, " + T4 + "}",
+        "{within: [a.white_noise, b.swing], value: 0.3, " + T4 + "}",
+        "{names: [a.white_noise, b.swing], matrix: [[1, 0.3], [0.3, 1]], " + T4 + "}",
+        "{names: [a.white_noise, b.swing], loadings: [[0.6], [0.5]], " + T4 + "}",
+        "{blocks: [{names: [a.white_noise, b.swing], value: 0.3}], " + T4 + "}",
+    ],
+)
+def test_every_form_takes_a_copula(item):
+    (found,) = correlation(item).copulas
+    assert found.names == ("a.white_noise", "b.swing") and found.df == 4.0
+
+
+def test_items_that_share_a_name_share_their_copula():
+    found = correlation(
+        "[{between: [a.white_noise, b.swing], value: 0.3, " + T4 + "}, "
+        "{between: [b.swing, c.noise], value: 0.2, " + T4 + "}]"
+    )
+    (copula,) = found.copulas
+    assert copula.names == found.names == ("a.white_noise", "b.swing", "c.noise")
+
+
+@pytest.mark.parametrize("other", ["", ", copula: {student_t: {df: 5}}"])
+def test_two_copulas_of_one_name_are_refused(other):
+    (found,) = correlation_faults(
+        "[{between: [a.white_noise, b.swing], value: 0.3, " + T4 + "}, "
+        "{between: [b.swing, c.noise], value: 0.2" + other + "}]"
+    )
+    assert found.startswith("another item ties b.swing by a t copula of 4 degrees of freedom, and here")
+
+
+@pytest.mark.parametrize(
+    ("copula", "message"),
+    [
+        ("normal", "expected a copula such as {student_t: {df: 4}}"),
+        ("{student_t: {df: 2}}", "expected a number above 2, got 2"),
+        ("{student_t: {}}", "expected the key df"),
+    ],
+)
+def test_copulas_that_are_none(copula, message):
+    (found,) = correlation_faults("{between: [a.white_noise, b.swing], value: 0.3, copula: " + copula + "}")
+    assert found.startswith(message)
+
+
+def test_too_many_names_of_one_copula():
+    names = ", ".join(f"s{i}.white_noise" for i in range(101))
+    bodies = "".join(f"  s{i}: {{white_noise: {{sd: 1}}}}\n" for i in range(101))
+    (found,) = faults(HEAD + "series:\n" + bodies + f"correlation: {{within: [{names}], value: 0.1, {T4}}}\n")
+    assert found.startswith("expected at most 100 names in a t copula, got 101")

@@ -47,6 +47,20 @@ FAMILIES: Mapping[str, Any] = {
         },
         "correlation": [{"between": ["x.white_noise", "z.garch"], "value": 0.5}],
     },
+    "t copula": {
+        "series": {
+            "x": [{"ar": {"phi": 0.6, "sd": 1}}],
+            "y": [{"white_noise": {"sd": 2, "law": _T}}],
+            "z": [{"random_walk": {"sd": 0.3}}],
+        },
+        "correlation": [
+            {
+                "within": ["x.ar", "y.white_noise", "z.random_walk"],
+                "value": 0.5,
+                "copula": {"student_t": {"df": 4}},
+            }
+        ],
+    },
     "calendar": {
         "time": {"start": "2027-01-04", "every": "1d", "zone": "Europe/Madrid"},
         "series": {
