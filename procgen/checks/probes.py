@@ -228,10 +228,10 @@ def _product_sds(plan: SeriesPlan, pairs: Sequence[tuple[int, int]]) -> dict[tup
         return found
     i, j = np.array(moving).T
     squares = plan.theory.covariance_of_squares(plan.steps[j], plan.steps[i])
-    known = [v if a == b else plan.covariance[a, b] for (a, b), v in zip(moving, plan.variance[i], strict=True)]
+    known = [plan.variance[a] if a == b else plan.covariance[a, b] for a, b in moving]
     if squares is None or None in known:
         return found | {pair: _product_sd(plan, *pair) for pair in moving}
-    variances = squares + plan.variance[i] * plan.variance[j] - np.square(known)
+    variances = squares + plan.variance[i] * plan.variance[j] - np.square(np.array(known, float))
     return found | {
         pair: float(np.sqrt(v)) if v > 0 else None for pair, v in zip(moving, variances.tolist(), strict=True)
     }

@@ -19,7 +19,7 @@ WIDTH = 100
 DUST = 1e-13  # of the variance
 NOTHING = 1e-9  # a partial autocorrelation that is shown as 0
 WIDEST = 90  # lags in a correlogram
-WANTED = ("mean", "variance", "autocovariance")  # reasons of others are told for stationary series only
+WANTED = ("mean", "variance", "autocovariance")  # of others, where autocovariances depend on the lag alone
 
 
 def theory_json(
@@ -87,7 +87,7 @@ def _series(theory: SeriesTheory, facts: dict[str, Any], unit: str | None, lags:
         lines += _ahead(facts["forecast_variance"])
         lines += _averaged(theory, facts) + _correlogram(theory, lags)
     lines += _law(facts)
-    lines += _wrapped(_unknown(facts))
+    lines += _wrapped(_unknown(facts, theory.stationarity.covariance_stationary))
     if "condition" in facts:
         lines.append(f"  condition number {facts['condition']:.2g}: expect relative errors of 1e-16 times that")
     return lines
@@ -123,7 +123,8 @@ def _ahead(facts: dict[str, Any]) -> list[str]:
     """Variances of forecast errors; those that all parts' pasts would leave, where these tell more."""
     values, parts = facts["values"], facts["given_parts"]
     same = values is None or parts is None or np.allclose(values, parts, rtol=1e-9, atol=0.0)
-    rows = [("error variance", values), ("seeing all parts", None if same and values else parts)]
+    linear = "error variance" if parts is not None else "error variance, linear"  # of the best linear forecast
+    rows = [(linear, values), ("seeing all parts", None if same and values else parts)]
     return _table("steps ahead", facts["horizons"], rows)
 
 
@@ -176,11 +177,11 @@ def _without_dust(values: np.ndarray, least: float = DUST) -> list[float]:
     return np.where(np.abs(values) < least * size, 0.0, values).tolist()
 
 
-def _unknown(facts: dict[str, Any]) -> list[str]:
+def _unknown(facts: dict[str, Any], steady: bool) -> list[str]:
     """Why numbers are missing, those with one reason together."""
     by_reason: dict[str, list[str]] = {}
     for what, why in facts.get("unknown", {}).items():
-        if what in WANTED or "stationary" in facts["stationarity"]["verdict"]:
+        if what in WANTED or (steady and "." not in what):
             by_reason.setdefault(why, []).append(what.replace("_", " "))
     return [f"{', '.join(names)} unknown: {why}" for why, names in by_reason.items()]
 

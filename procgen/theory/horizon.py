@@ -7,8 +7,9 @@ steps ahead has variance
 
 Given its own past values alone, it is sigma^2 times the sum of psi(j)^2, with psi and sigma^2 of the series' Wold
 form: theta and sigma^2 factor the spectral density of the joint numerator (`theory.wold`). That is what a Kalman
-filter settles to, whatever it started from (Harvey 1989, ch. 3). For Gaussian series both are the best forecasts
-there are, for others the best linear ones.
+filter settles to, whatever it started from (Harvey 1989, ch. 3); for components of a system it is computed as such
+(`theory.filtering`). Where a series is no linear function of shocks its spectral density is added up from its
+autocovariances. For Gaussian series these are the best forecasts there are, for others the best linear ones.
 """
 
 from __future__ import annotations
@@ -20,13 +21,19 @@ import numpy as np
 
 from procgen.theory.arma import PowerSeries
 from procgen.theory.expression import Expression
+from procgen.theory.filtering import error_variance
 from procgen.theory.linear import At
 from procgen.theory.sources import PROCESS, Source
+from procgen.theory.spectrum import remembered
+from procgen.theory.system import system_of
 from procgen.theory.unknown import Unknown
-from procgen.theory.wold import Ratio, ratios, wold
+from procgen.theory.verdict import judge
+from procgen.theory.wold import MOST_POINTS, Ratio, innovations, ratios, wold
 
 FARTHEST = 1_000_000  # steps ahead
 LONGEST_HISTORY = 2_000  # values: the work is their number cubed
+FLATTEST = 1e-6  # share of its peak that a spectral density must keep everywhere
+TOLERANCE = 1e-8  # of a variance from autocovariances
 DETERMINED = 1e-12  # share of a variance that counts as nothing left
 
 
@@ -41,9 +48,13 @@ class Forecast:
 
 def variance_given_parts(x: Expression, horizons: np.ndarray) -> np.ndarray:
     """Variance of the forecast error at horizons >= 1, all past shocks of every source given."""
-    last, own = _last(x, horizons), _long_memory(x)
+    last, own, bent = _last(horizons), _long_memory(x), _bent(x)
     if own:
         return np.cumsum(own(last) ** 2)[horizons - 1]
+    if bent:
+        raise Unknown(bent)
+    if _has_components(x):
+        return error_variance(system_of(x.space, (x.linear,)), horizons, "parts")
     psi: dict[Source, np.ndarray] = {}
     for source, ratio in ratios(x.linear):
         psi[source] = psi.get(source, 0.0) + _series(ratio).upto(last)
@@ -55,14 +66,40 @@ def variance_given_parts(x: Expression, horizons: np.ndarray) -> np.ndarray:
 
 
 def variance_given_values(x: Expression, horizons: np.ndarray) -> np.ndarray:
-    """Variance of the forecast error at horizons >= 1, all past values of the series itself given."""
-    last, own = _last(x, horizons), _long_memory(x)
+    """Variance of the error of the best linear forecast at horizons >= 1, all past values of the series given."""
+    last, own, bent = _last(horizons), _long_memory(x), _bent(x)
     if own:
         return np.cumsum(own(last) ** 2)[horizons - 1]
+    if bent and not judge(x).covariance_stationary:
+        raise Unknown(f"{bent}, and its covariances depend on the step: so does the error of a forecast")
+    if bent:
+        return _by_spectrum(x, last)[horizons - 1]
     if not x.linear:
         return np.zeros(horizons.shape)
+    if _has_components(x):
+        return error_variance(system_of(x.space, (x.linear,)), horizons, "values")
     variance, ratio = wold(x.space, x.linear)
     return variance * np.cumsum(_series(ratio).upto(last) ** 2)[horizons - 1]
+
+
+def _by_spectrum(x: Expression, last: int) -> np.ndarray:
+    """The same at horizons 1 .. last from autocovariances alone, by the logarithm of their spectral density.
+
+    Kolmogorov (1941).
+    """
+    gamma = remembered(x)
+    if gamma[0] <= 0.0:
+        return np.zeros(last)
+    points, before = 1 << max(12, (4 * max(len(gamma), last)).bit_length()), None
+    while points <= MOST_POINTS:
+        density = 2.0 * np.fft.rfft(gamma, points).real - gamma[0]
+        if density.min() < FLATTEST * density.max():
+            raise Unknown("its spectral density comes too near to 0 for its logarithm to be added up")
+        found = innovations(np.fft.irfft(np.log(density)), last)
+        if before is not None and np.abs(found - before).max() <= 1e-3 * TOLERANCE * np.abs(found).max():
+            return float(found[0]) * np.cumsum(found[1:] ** 2)[:last]
+        before, points = found, 2 * points
+    raise Unknown("its spectral density is too steep for its logarithm to be added up")
 
 
 def forecast(x: Expression, horizons: np.ndarray, history: Sequence[float], from_step: int) -> Forecast:
@@ -107,14 +144,29 @@ def _series(ratio: Ratio) -> PowerSeries:
     return PowerSeries(ratio.numerator, tuple((-ratio.denominator[1:]).tolist()))
 
 
-def _last(x: Expression, horizons: np.ndarray) -> int:
-    """The farthest horizon, for a series whose forecasts have variances in closed form."""
-    if x.terms or (any(source.kind == PROCESS for source in x.sources) and not _long_memory(x)):
-        raise Unknown("it is no sum of linear recursions of white noise: its forecasts have no variance in closed form")
+def _last(horizons: np.ndarray) -> int:
+    """The farthest horizon."""
     last = int(np.max(horizons, initial=1))
     if last > FARTHEST:
         raise Unknown(f"forecasts are computed up to {FARTHEST} steps ahead")
     return last
+
+
+def _bent(x: Expression) -> str:
+    """Why a series is no linear function of shocks, or nothing."""
+    if x.terms:
+        return "what is to come depends on its parts through a product or an exponential"
+    names = dict.fromkeys(s.detail.name for s in x.sources if s.kind == PROCESS and not _is_component(s))
+    return f"what is to come depends on {', '.join(names)}, in no straight line" if names else ""
+
+
+def _is_component(source: Source) -> bool:
+    return getattr(source.detail, "system", None) is not None
+
+
+def _has_components(x: Expression) -> bool:
+    """Whether a component of a system of several series is among the sources."""
+    return any(map(_is_component, x.sources))
 
 
 def _long_memory(x: Expression) -> Callable[[int], np.ndarray] | None:

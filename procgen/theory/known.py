@@ -185,7 +185,13 @@ def whole(
 
 
 def observed(
-    key: tuple, at: Function, horizon: int, name: str, period: float | None = None, settles: bool = False
+    key: tuple,
+    at: Function,
+    horizon: int,
+    name: str,
+    period: float | None = None,
+    settles: bool = False,
+    note: str = "",
 ) -> Known:
     """A function given as such; a constant or a straight line is recognised, up to `horizon` and before step 0."""
     steps = np.concatenate([-_looked_at(EARLIEST)[:0:-1], _looked_at(horizon)])
@@ -194,7 +200,7 @@ def observed(
         line = _line(steps, values, ROUNDING * float(np.abs(values).max()))
         if line is not None:
             return Known(*line, names=(name,))
-    note = f"period of {period:g} steps in {name}" if period else f"known path of {name}"
+    note = note or (f"period of {period:g} steps in {name}" if period else f"known path of {name}")
     return whole(key, at, frozenset([float(period)]) if period else None, note, settles)
 
 

@@ -125,8 +125,9 @@ class LogVariance(Volatility):
         if self.limit <= 2.0:
             raise Unknown("infinite fourth moment: the exponential of its shocks has no second power")
         left = self.beta ** np.asarray(lags, float)
-        one = self.cumulants(np.ones(1))[0]
-        return self.cumulants(1.0 + left) - one - self.cumulants(left)
+        flat = left.ravel()
+        both, alone, one = np.split(self.cumulants(np.concatenate([1.0 + flat, flat, [1.0]])), [flat.size, -1])
+        return (both - one - alone).reshape(left.shape)  # added up alike, so that their errors cancel at long lags
 
     def _power(self, p: float) -> float:
         return float(np.exp(p * self.mean_log + self.cumulants(np.array([p]))[0]))

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
+
 import numpy as np
 
 from procgen.theory.expression import Expression
@@ -10,6 +12,7 @@ from procgen.theory.spectrum import FEWEST, is_filtered, long_run_variance, long
 from procgen.theory.unknown import Unknown
 
 LONGEST_PARTIAL = 20_000  # lags: the recursion takes the square of their number
+LONGEST_SEARCH = 1 << 15  # lags among which a half-life is looked for where they do not die out
 LOST = 1e10  # magnification of rounding errors up to which partial autocorrelations are given
 
 
@@ -55,11 +58,45 @@ def _durbin_levinson(gamma: np.ndarray) -> np.ndarray:
 
 
 def half_life(x: Expression) -> int:
-    """The first lag from which on no autocorrelation exceeds 1/2 in size."""
-    gamma = remembered(x)
+    """The first lag from which on no autocorrelation exceeds 1/2 in size; looked for up to lag LONGEST_SEARCH."""
+    try:
+        gamma = remembered(x)
+    except Unknown:
+        lags = np.arange(LONGEST_SEARCH + 1)
+        gamma = x.covariance(x, lags, np.zeros_like(lags))
+        _refuse_unsettled(gamma)
+    return _half_life(gamma)
+
+
+def searched_half_life(autocovariance: Callable[[np.ndarray], np.ndarray]) -> int:
+    """The same of a function of int64 lags, in as few of its values as it needs."""
+    count = FEWEST
+    while True:
+        gamma = autocovariance(np.arange(count + 1))
+        try:
+            _refuse_unsettled(gamma)
+            return _half_life(gamma)
+        except Unknown:
+            if count >= LONGEST_SEARCH:
+                raise
+        count *= 8
+
+
+def _half_life(gamma: np.ndarray) -> int:
     if gamma[0] <= 0.0:
         raise Unknown("the variance is 0")
     return int(np.flatnonzero(np.abs(gamma) > gamma[0] / 2.0)[-1]) + 1
+
+
+def _refuse_unsettled(gamma: np.ndarray) -> None:
+    """Lags that have not died out tell a half-life where the last half of them stays below 1/2."""
+    if not np.isfinite(gamma).all():
+        raise OverflowError
+    late = np.abs(gamma[len(gamma) // 2 :])
+    if late.max() > abs(gamma[0]) / 2.0:
+        at = len(gamma) // 2 + int(np.flatnonzero(late > abs(gamma[0]) / 2.0)[-1])
+        left = gamma[at] / gamma[0]
+        raise Unknown(f"looked for up to lag {len(gamma) - 1}; at lag {at} the autocorrelation is still {left:.3g}")
 
 
 def variance_of_mean(x: Expression, counts: np.ndarray, steady: bool) -> np.ndarray:

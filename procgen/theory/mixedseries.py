@@ -9,9 +9,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.spec.draws import NormalDraw
-from procgen.theory.memory import _durbin_levinson
+from procgen.theory.horizon import Forecast
+from procgen.theory.memory import _durbin_levinson, searched_half_life
 from procgen.theory.mixedlaw import MixedLaw, MixedNormals, Normal
-from procgen.theory.series import SeriesTheory, _steps
+from procgen.theory.series import SeriesTheory, _counted, _steps
 from procgen.theory.unknown import Unknown
 from procgen.theory.varied import Mixture, Node, sum_of
 from procgen.theory.verdict import Stationarity
@@ -302,17 +303,34 @@ class MixedSeries(SeriesTheory):
         return self._ask(node, what, *args) if args else self._ask_plain(node, what)
 
     @cached_property
-    def half_life(self) -> None:
-        return self._try("half_life", self._not_averaged)
+    def half_life(self) -> int | None:
+        def search() -> int:
+            if not self.stationarity.covariance_stationary:
+                raise Unknown("its autocovariances depend on the step")
+            return searched_half_life(lambda lags: self._covariance(lags, np.zeros_like(lags)))
+
+        return self._try("half_life", search)
 
     def forecast_variance(self, horizons, given: str = "values") -> None:
-        return self._try("forecast_variance", self._not_averaged)
+        why = (
+            "the past of a path tells of its drawn parameters, and how well depends on the path: the error has no one "
+            "variance; with a value in place of each draw it is known"
+        )
+        return self._try("forecast_variance", lambda: _refused(why))
 
-    def forecast(self, horizons, history=(), from_step: int = 0) -> None:
-        return self._try("forecast", self._not_averaged)
+    def forecast(self, horizons, history=(), from_step: int = 0) -> Forecast | None:
+        """Without a history: total mean and variance. What given values tell of the parameters is not computed."""
 
-    def _not_averaged(self) -> None:
-        raise Unknown("it is known for each value of the drawn parameters, and not averaged over them")
+        def total() -> Forecast:
+            if len(history):
+                _refused(
+                    "given values tell of the drawn parameters of their path, and the law of these given values is not "
+                    "computed; ask without a history, or put a value in place of each draw"
+                )
+            steps = from_step - 1 + _counted("horizons", horizons)
+            return Forecast(steps, self._mean(steps), np.maximum(self._covariance(steps, steps), 0.0))
+
+        return self._try("forecast", total)
 
     @cached_property
     def highest_moment(self) -> float | None:
@@ -336,3 +354,7 @@ class MixedSeries(SeriesTheory):
     @property
     def condition(self) -> float:
         return max(node.theory[self.name].condition for node in self._few)
+
+
+def _refused(why: str) -> None:
+    raise Unknown(why)

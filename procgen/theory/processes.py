@@ -34,6 +34,14 @@ class Process:
         self.name, self.ingredients, self.says = name, ingredients, says
         self.highest_moment = np.inf
 
+    def goes_with(self, source: Source) -> bool:
+        """Whether what is said of a combination is said of this process and that source together."""
+        return source.detail is self
+
+    def verdicts(self, form: Linear) -> tuple[tuple[str, str], ...]:
+        """What it adds to the verdict on a combination of it and of what goes with it."""
+        return self.says
+
     def covariance(self, t: Steps, s: Steps) -> np.ndarray:
         """Cov(x(t), x(s)) at steps of one shape, negative ones too."""
         raise Unknown(f"{self.name} has no closed covariance")

@@ -157,7 +157,10 @@ class SeriesTheory:
 
     @cached_property
     def half_life(self) -> int | None:
-        """The first lag from which on no autocorrelation exceeds 1/2 in size, in steps."""
+        """The first lag from which on no autocorrelation exceeds 1/2 in size, in steps.
+
+        Where they do not die out it is looked for among the first 32,768.
+        """
         return self._try("half_life", lambda: memory.half_life(self._steady()))
 
     @cached_property
@@ -175,8 +178,8 @@ class SeriesTheory:
         """Variance of the error of the best linear forecast h >= 1 steps ahead, long after the start.
 
         `given` is what is known of the past: the series' own "values", or the shocks of all its "parts", which tell
-        more where there are several. A linear series only; where conditional variances move it is their mean. Source:
-        Box & Jenkins (1970), ch. 5; Harvey (1989), ch. 3.
+        more where there are several and the series is linear in them. Where conditional variances move it is their
+        mean. Source: Box & Jenkins (1970), ch. 5; Harvey (1989), ch. 3; Kolmogorov (1941).
         """
         if given not in ("values", "parts"):
             raise ValueError(f"expected `given` to be values or parts, got {given!r}")
@@ -234,6 +237,8 @@ class SeriesTheory:
         steps = np.asarray(at, np.int64)
         span = np.arange(lags + 1) if isinstance(lags, int) else np.asarray(lags, np.int64)
         first = 0 if self.stationarity.covariance_stationary or not len(steps) else int(steps[0])
+        parts = plain(self.forecast_variance(horizons, given="parts"))
+        why_no_parts = self.reason("forecast_variance")
         numbers: dict[str, Any] = {
             "mean": plain(self.mean(steps)),
             "variance": plain(self.variance(steps)),
@@ -254,7 +259,7 @@ class SeriesTheory:
             },
             "forecast_variance": {
                 "horizons": list(horizons),
-                "given_parts": plain(self.forecast_variance(horizons, given="parts")),
+                "given_parts": parts,
                 "values": plain(self.forecast_variance(horizons)),
             },
             "excess_kurtosis": self.excess_kurtosis,
@@ -267,6 +272,8 @@ class SeriesTheory:
             **numbers,
         }
         reasons = {name: self._reasons[name] for name in numbers if name in self._reasons}
+        if why_no_parts:
+            reasons["forecast_variance.given_parts"] = why_no_parts
         if reasons:
             out["unknown"] = reasons
         if self.condition > WORTH_SAYING:

@@ -7,9 +7,13 @@ from typing import Any
 
 import numpy as np
 
+from procgen.theory.known import observed
+from procgen.theory.linear import At, Linear
 from procgen.theory.processes import Process, Steps
+from procgen.theory.sources import Source
 from procgen.theory.system import System
 
+CANCELS = 1e-9  # share of its parts that is left of a unit root where it has cancelled
 SETTLED = 1e-18  # share of what is added by a doubling, from which on nothing changes
 
 
@@ -41,11 +45,36 @@ class Component(Process):
         by = max(0, -int(min(t.min(initial=0), s.min(initial=0))))
         return self.system.covariance(self.row, other.row, t + by, s + by).reshape(shape)
 
+    def goes_with(self, source: Source) -> bool:
+        return getattr(source.detail, "system", None) is self.system
+
+    def verdicts(self, form: Linear) -> tuple[tuple[str, str], ...]:
+        """What is to be said of a combination of components of this system: unit roots may cancel in it."""
+        from procgen.theory.verdict import GROWS, LEAVES, SETTLES
+
+        gains, sizes = np.zeros((2, len(self.system.observation)))
+        for key, c in form.items():
+            if not isinstance(key, At):  # a running sum of a component, or its value of step 0 for ever
+                return self.says
+            gain, row = c / (1.0 - sum(key.base.phi)), key.base.source.detail.row
+            gains[row], sizes[row] = gains[row] + gain, sizes[row] + abs(gain)
+        staying = self.system.observation @ _staying(self.system.transition)  # what stays for ever, in each component
+        cancels = np.all(np.abs(gains @ staying) <= CANCELS * (sizes @ np.abs(staying)))
+        if all(verdict != GROWS for verdict, _ in self.says) or not cancels:
+            return self.says
+        return ((SETTLES, f"{self.name} {LEAVES}: its unit roots cancel"),)
+
     def marginal(self, step: int) -> Any:
         from scipy.stats import norm
 
         at = np.array([step], np.int64)
         return norm(0.0, float(np.sqrt(self.covariance(at, at)[0])))
+
+
+def _staying(transition: np.ndarray) -> np.ndarray:
+    """The states that a transition leaves as they are, as columns: an orthonormal basis."""
+    _, sizes, rows = np.linalg.svd(transition - np.eye(len(transition)))
+    return rows[sizes <= CANCELS * max(1.0, float(sizes[0]))].T
 
 
 def space_of(phi: Sequence, theta: Sequence, loading: np.ndarray, initial: str, names: tuple[str, ...]) -> System:
@@ -87,24 +116,30 @@ def components(axis: Any, noises: Sequence[Any], phi, theta, loading, before=Non
 
     `before` has rows of values x and of shocks before step 0, oldest first; `rank` is that of the cointegration.
     """
+    from procgen.theory.expression import Expression
     from procgen.theory.verdict import GROWS, LEAVES, SETTLES
 
     k, p, q = len(loading), max(1, len(phi)), len(theta)
     says: tuple[tuple[str, str], ...] = ()
-    initial, past = "stationary", None
+    initial, past, leaves = "stationary", None, f"{axis.name} {LEAVES}"
     if start is not None:
         roots = f"{k - rank} unit {'root' if k - rank == 1 else 'roots'} in {axis.name} (cointegration rank {rank})"
+        leaves = f"the mean of {axis.name} leaves from its start"
         initial, says, past = "known", ((GROWS, roots),), (0, np.tile(start, p), np.array([start]))
     elif before is not None:
         x, a = (np.array(before[name], float).reshape(-1, k) for name in ("x", "shocks"))
         newest = np.zeros(((p + q) * k,))
         newest[: min(p, len(x)) * k], newest[p * k :] = x[::-1][:p].ravel(), a[::-1][:q].ravel()
-        initial, says, past = "shocked", ((SETTLES, f"{axis.name} {LEAVES}"),), (-1, newest, x)
+        initial, says, past = "shocked", ((SETTLES, leaves),), (-1, newest, x)
     names = tuple(source.key for noise in noises for source in noise.sources)
     system, parts = space_of(phi, theta, loading, initial, names), []
     for row in range(k):
         part = axis.process(Component(axis.name, tuple(noises), system, row, past is not None, says))
-        parts.append(part if past is None or not past[1].any() else part + axis.known(_path(system, row, *past)))
+        if past is not None and past[1].any():
+            path, key = _path(system, row, *past), ("mean of", axis.name, row)
+            mean = observed(key, path, axis.horizon, axis.name, settles=True, note=leaves)
+            part = part + Expression(axis.space, mean)
+        parts.append(part)
     return parts
 
 

@@ -131,7 +131,13 @@ def _form(findings: _Findings, form: Linear) -> None:
         elif base_of(key).started:
             _started(findings, key)
     for source in form.sources:
-        _source(findings, source)
+        if source.kind == PROCESS:
+            _ingredients(findings, source.detail.ingredients)
+            of_it = Linear({key: c for key, c in form.items() if source.detail.goes_with(base_of(key).source)})
+            for verdict, reason in source.detail.verdicts(of_it):
+                findings.say(verdict, reason)
+        else:
+            _source(findings, source)
 
 
 def _started(findings: _Findings, key: Key) -> None:
@@ -162,10 +168,6 @@ def _source(findings: _Findings, source: Source) -> None:
     if source.kind == OPAQUE:
         _ingredients(findings, source.detail)
         findings.notes.append(f"moments unknown: {source.reason}")
-    elif source.kind == PROCESS:
-        _ingredients(findings, source.detail.ingredients)
-        for verdict, reason in source.detail.says:
-            findings.say(verdict, reason)
     elif source.kind in (GARCH, SQUARES):
         _heteroskedastic(findings, source)
     elif not np.isfinite(source.variance):

@@ -187,7 +187,7 @@ def _factored(space: Space, numerators: dict[Source, np.ndarray]) -> tuple[float
         density = sum(scale * (spectra[a] * spectra[b].conj()).real for (a, b), scale in scales.items() if scale)
         if np.min(density) <= np.finfo(float).eps * np.max(density):
             break
-        found = _exponential(np.fft.irfft(np.log(density)), degree)
+        found = innovations(np.fft.irfft(np.log(density)), degree)
         if before is not None and np.abs(found - before).max() <= SETTLED * np.abs(found).max():
             return float(found[0]), found[1:] / found[1]
         before, points = found, 2 * points
@@ -202,8 +202,8 @@ def _invertible(numerator: np.ndarray) -> np.ndarray | None:
     return theta if partial_autocorrelations((-theta[1:]).tolist()) is not None else None
 
 
-def _exponential(cepstrum: np.ndarray, degree: int) -> np.ndarray:
-    """exp(c_0), and the coefficients up to a degree of exp(sum over k >= 1 of c_k B^k)."""
+def innovations(cepstrum: np.ndarray, degree: int) -> np.ndarray:
+    """exp(c_0), and the coefficients up to a degree of exp(sum over k >= 1 of c_k B^k), of a log density."""
     folded = np.zeros(len(cepstrum))
     folded[1 : len(cepstrum) // 2] = cepstrum[1 : len(cepstrum) // 2]
     folded[len(cepstrum) // 2] = cepstrum[len(cepstrum) // 2] / 2.0

@@ -73,7 +73,9 @@ def test_several_parts_heavy_tails_and_what_is_not_known():
     assert "error variance 14.8714 " in " ".join(two.split()) and "seeing all parts 13 " in " ".join(two.split())
     assert "of squares" in two and "moments below order 5 exist" in two
     price = text_of({"exp": [{"ar": {"phi": 0.8, "sd": 0.3}}]})
-    assert "forecast variance unknown: it is no sum of linear recursions" in " ".join(price.split())
+    assert "error variance, linear" in price and "seeing all parts" not in price
+    bursts = text_of({"fractional_gaussian_noise": {"hurst": 0.8, "sd": 1}}, {"white_noise": {"sd": 1}})
+    assert "forecast variance unknown: its autocovariances have not died out" in " ".join(bursts.split())
     assert "a mean of n steps is worth n/8.45 independent values" in price  # 3.08273 / 0.364696
 
 

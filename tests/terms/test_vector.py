@@ -128,6 +128,11 @@ def test_a_relation_is_an_autoregression_of_its_own():
     t = np.arange(STEPS)
     np.testing.assert_allclose(known["z"].variance(t), 1.64 * (1 - 0.49**t) / 0.51, rtol=1e-12, atol=1e-14)
     assert known["a"].stationarity.reasons == ("1 unit root in w.v (cointegration rank 1)",)
+    verdict, reasons = known["z"].stationarity
+    assert verdict == "settles from its given start"
+    assert reasons == ("w.v leaves from a given past and forgets it: its unit roots cancel",)
+    _, known, _ = system(body, series=spread.replace("-1", "-0.999"))
+    assert known["z"].stationarity.verdict == "variance grows"
 
 
 @pytest.mark.skipif(not available(), reason="the speed extra is not installed")

@@ -11,6 +11,7 @@ from scipy.linalg import solve_discrete_are
 from scipy.signal import lfilter
 from statsmodels.tsa.statespace.sarimax import SARIMAX
 from statsmodels.tsa.statespace.structural import UnobservedComponents
+from statsmodels.tsa.stattools import levinson_durbin
 
 from procgen.terms.base import Unknown
 from procgen.terms.recover import forecast
@@ -244,6 +245,51 @@ def test_a_forecast_from_a_known_start_and_from_before():
         walk.forecast([1], [6.0, 8.0])
 
 
+def autocovariances():
+    """Closed forms from outside: of an exponential (Aitchison & Brown 1957), and of a chain of two states."""
+    lags = np.arange(600)
+    return {
+        "price": ([{"exp": [{"ar": {"phi": 0.5, "sd": 0.6}}]}], np.exp(0.48) * np.expm1(0.48 * 0.5**lags)),
+        "flag": ([{"flag": {"share": 0.2, "stay": 4}}], 0.16 * 0.6875**lags),
+        "both": (
+            [{"exp": [{"ar": {"phi": 0.5, "sd": 0.6}}]}, {"ar": {"phi": -0.8, "sd": 1}, "as": "own"}],
+            np.exp(0.48) * np.expm1(0.48 * 0.5**lags) + (-0.8) ** lags / 0.36,
+        ),
+    }
+
+
+@pytest.mark.parametrize("name", ["price", "flag", "both"])
+def test_best_linear_forecasts_of_what_is_not_linear(name):
+    """Durbin's recursion of statsmodels over 500 lags of a closed form, then psi weights by their recursion."""
+    body, gamma = autocovariances()[name]
+    _, phi, _, left, _ = levinson_durbin(gamma, nlags=500, isacov=True)
+    psi = lfilter([1.0], np.concatenate([[1.0], -phi]), np.eye(1, 30)[0])
+    expected = left[-1] if np.ndim(left) else left
+    np.testing.assert_allclose(series_of(*body).forecast_variance(H), (expected * np.cumsum(psi**2))[H - 1], rtol=1e-8)
+
+
+SYSTEM = {"names": ["a", "b"], "sd": [1.0, 2.0], "correlation": [[1, 0.3], [0.3, 1]]}
+STATIONARY = {"vector_arma": SYSTEM | {"phi": [[[0.5, 0.3], [-0.2, 0.4]]], "theta": [[[0.3, 0], [0.1, -0.4]]]}}
+PULLED = {
+    "vector_error_correction": SYSTEM
+    | {"relations": [[1, -1]], "adjustment": [[-0.1], [0.2]], "phi": [[[0.1, 0], [0.25, 0.1]]]}
+}
+
+
+@pytest.mark.parametrize("term", [STATIONARY, PULLED], ids=["stationary", "cointegrated"])
+@pytest.mark.parametrize("factor", [0, -1], ids=["component", "difference"])
+def test_components_of_a_system_against_dense_conditioning(term, factor):
+    """Given 250 values long after the start, by the covariances of all (Brockwell & Davis 1991, 5.1)."""
+    body = [{"use": "w.v.a"}, {"use": "w.v.b", "times": factor}] if factor else [{"use": "w.v.a"}]
+    x = theory_of({"x": [*body, {"ar": {"phi": 0.7, "sd": 0.5}}], "z": body}, shared={"w": [{**term, "as": "v"}]})
+    for series in x.values():
+        known = series.forecast(H, series.mean(np.arange(400, 650)), from_step=400)
+        np.testing.assert_allclose(series.forecast_variance(H), known.variance, rtol=1e-8)
+    all_seen = x["z"].forecast_variance(H, given="parts")
+    step = np.array([1.0, factor]) @ [[1.0, 0.6], [0.6, 4.0]] @ [1.0, factor]
+    assert all_seen[0] == pytest.approx(step, rel=1e-12) and (all_seen <= x["z"].forecast_variance(H)).all()
+
+
 def test_reasons_and_refusals():
     whole = theory_of(
         {
@@ -257,9 +303,13 @@ def test_reasons_and_refusals():
         }
     )
     price, twice, drifting = whole["price"], whole["twice"], whole["drifting"]
+    grown = series_of({"exp": [{"random_walk": {"sd": 0.1}}]})
     assert drifting.forecast_variance([1]) is None and "too long to settle" in drifting.reason("forecast_variance")
     assert drifting.forecast_variance([1], given="parts") is not None
-    assert price.forecast_variance([1]) is None and "no sum of linear recursions" in price.reason("forecast_variance")
+    assert price.forecast_variance([1], given="parts") is None
+    assert "through a product or an exponential" in price.reason("forecast_variance")
+    assert grown.forecast_variance([1]) is None
+    assert "covariances depend on the step" in grown.reason("forecast_variance")
     assert whole["heavy"].forecast_variance([1]) is None
     assert "infinite variance" in whole["heavy"].reason("forecast_variance")
     assert twice.forecast_variance([10**7]) is None and "up to 1000000 steps" in twice.reason("forecast_variance")

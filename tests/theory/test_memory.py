@@ -79,6 +79,12 @@ def test_half_lives_of_seasons_and_of_what_has_none():
     assert series_of({"white_noise": {"sd": 1}}).half_life == 1
     walk = series_of({"random_walk": {"sd": 1}})
     assert walk.half_life is None and "unit root" in walk.reason("half_life")
+    for d in (0.1, 0.4, 0.45):  # by gamma(k) = gamma(k - 1) (k - 1 + d) / (k - d) (Hosking 1981), which falls
+        k = np.arange(1.0, 1000.0)
+        above = np.count_nonzero(np.cumprod((k - 1 + d) / (k - d)) > 0.5)
+        assert series_of({"arfima": {"d": d, "sd": 1}}).half_life == above + 1
+    longest = series_of({"arfima": {"d": 0.49, "sd": 1}})
+    assert longest.half_life is None and "at lag 32768 the autocorrelation is still 0.7" in longest.reason("half_life")
     level = series_of({"constant": 3})
     assert level.half_life is None and level.reason("half_life") == "the variance is 0"
     assert level.partial_autocorrelation([1]) is None and level.reason("partial_autocorrelation") == "the variance is 0"

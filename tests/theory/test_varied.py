@@ -189,11 +189,17 @@ def test_means_of_many_steps_and_frequencies():
     assert x.variance_of_mean([10])[0] == pytest.approx(average(of_mean, 0.3, 0.9), rel=1e-9)
     assert x.long_run_variance == pytest.approx(average(lambda p: 1 / (1 - p) ** 2, 0.3, 0.9), rel=1e-9)
     assert x.spectral_density([0.5])[0] == pytest.approx(average(lambda p: 1 / (1 + p) ** 2, 0.3, 0.9), rel=1e-9)
-    assert x.half_life is None and x.forecast_variance([1]) is None and x.forecast([1]) is None
+    left = [float(average(lambda p, k=k: p**k / (1 - p * p), 0.3, 0.9)) for k in range(12)]
+    assert x.half_life == next(k for k in range(12) if left[k] < left[0] / 2)
+    assert x.forecast_variance([1]) is None and "tells of its drawn parameters" in x.reason("forecast_variance")
+    assert x.forecast([1], [0.3]) is None and "ask without a history" in x.reason("forecast")
+    ahead = x.forecast([1, 5])
+    assert ahead.steps.tolist() == [0, 4] and ahead.variance == pytest.approx(left[:1] * 2, rel=1e-9)
     level = path({"normal": {"mean": 0, "sd": 2}})
     y = theory_of({"y": [{"ar": {"phi": 0.5, "sd": 1}}, {"constant": level}]})["y"]
     assert y.variance_of_mean([1000])[0] == pytest.approx(4 + float(of_mean(0.5, 1000)), rel=1e-9)
     assert y.long_run_variance is None and "drawn by path" in y.reason("long_run_variance")
+    assert y.half_life is None and "the autocorrelation is still 0.75" in y.reason("half_life")
     assert y.partial_autocorrelation([0, 1])[1] == pytest.approx((4 + 2 / 3) / (4 + 4 / 3), rel=1e-12)
 
 
