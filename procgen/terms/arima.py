@@ -10,7 +10,7 @@ import numpy as np
 from procgen.chance.kernel import kernel
 from procgen.spec.declare import Parameter, Real, Reals, Record, Span, Whole
 from procgen.terms.arma import Arma, not_causal
-from procgen.terms.base import LAW, SD, Ahead, Term, Unknown, number, rows, signed, without_gap
+from procgen.terms.base import LAW, SD, Ahead, Term, Unknown, number, rows, signed, stated, without_gap
 from procgen.terms.start import partial_autocorrelations
 
 
@@ -92,6 +92,14 @@ class Integrated(Term):
                     v = v - c * x[k + i]
             x.append(v / self.delta[-1])
         return np.array(x[head:0:-1])
+
+    def shown_past(self, lags=0, shocks=0):
+        """What an equation says of the values up to step 0, or before it, that the recursion goes on from."""
+        n = len(self.delta)
+        if self.before is None:
+            return [stated("x", self.known, 0) if any(self.known) else "x = 0 up to step 0"] if n else []
+        x, a = self.before["x"], self.before.get("shocks", ())
+        return [text for text in (stated("x", x[len(x) - n - lags :]), stated("a", a[len(a) - shocks :])) if text]
 
     def recurse(self, inputs, state, at):
         w, core = self.core.recurse(inputs, {"x": state["w"], "a": state["a"]}, at)
@@ -272,7 +280,8 @@ class Arima(Integrated):
         w = _power("(1 − B)", self.d) + _power(f"(1 − B^{self.period})", season["d"]) + " x[t]"
         if self.level:
             w = f"({w.strip()} {signed(-self.level, '')})" if left else f"{w.strip()} {signed(-self.level, '')}"
-        return f"{left} {w.strip()} = {right} a[t]".replace("=  a", "= a").strip()
+        recursion = f"{left} {w.strip()} = {right} a[t]".replace("=  a", "= a").strip()
+        return ",  ".join([recursion, *self.shown_past(len(self.core.phi), len(self.core.theta))])
 
 
 LONGEST = 1_000  # steps of a season

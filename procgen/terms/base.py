@@ -192,6 +192,8 @@ class Term:
         raise NotImplementedError
 
 
+MOST_SHOWN = 6  # stated values in an equation
+
 SD = Parameter(
     "sd", "σ", Real(above=0), "standard deviation of the shock", default=None, unit="series", per="diffusion"
 )
@@ -231,11 +233,17 @@ def rows(values: Sequence[float]) -> Array:
 
 
 def without_gap(values: Array, fill: float) -> tuple[Array, int]:
-    """Values with their unknown first rows (NaN) filled, and how many rows those are; for inversions."""
-    gap = int(np.count_nonzero(np.isnan(values[:, 0])))
-    if gap:
-        values = values.copy()
-        values[:gap] = fill
+    """Values with their unknown first rows (NaN) filled, and how many rows those are; for inversions.
+
+    Paths with parameters of their own may have gaps of their own: the longest counts, but for paths that are all gap.
+    """
+    if not len(values) or not np.isnan(values[0]).any():
+        return values, 0
+    absent = np.isnan(values)
+    leading = np.argmin(absent, axis=0)  # 0 for a path that is all gap, too
+    gap = int(leading.max()) or len(values) * bool(absent.all())
+    values = values.copy()
+    values[:gap] = fill
     return values, gap
 
 
@@ -257,6 +265,7 @@ def steps_since(x: float) -> str:
     return f"(t {signed(-x, '')})" if x else "t"
 
 
-def stated(name: str, past: Sequence[float]) -> str:
-    """`x[−2] = 4, x[−1] = 5` for a stated past, oldest first; for the end of an equation."""
-    return ", ".join(f"{name}[−{len(past) - i}] = {number(value)}" for i, value in enumerate(past))
+def stated(name: str, past: Sequence[float], last: int = -1) -> str:
+    """`x[−2] = 4, x[−1] = 5` for values stated up to step `last`, oldest first; for the end of an equation."""
+    shown = [f"{name}[{number(last + 1 - len(past) + i)}] = {number(value)}" for i, value in enumerate(past)]
+    return ", ".join(shown if len(shown) <= MOST_SHOWN else [*shown[:2], "…", shown[-1]])

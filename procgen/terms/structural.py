@@ -251,12 +251,12 @@ class SeasonalRandomWalk(Integrated):
 
     def equation(self, *inputs):
         if self.form == "walk":
-            return f"x[t] = x[t−{self.season}] + a[t]"
+            return ",  ".join([f"x[t] = x[t−{self.season}] + a[t]", *self.shown_past()])
         lags = range(1, self.season)
         shown = [f"− x[t−{i}]" for i in (lags if len(lags) < 4 else (1, 2, lags[-1]))]
         if len(lags) > 3:
             shown.insert(2, "− …")
-        return f"x[t] = {' '.join(shown)} + a[t]".replace("= − ", "= −")
+        return ",  ".join([f"x[t] = {' '.join(shown)} + a[t]".replace("= − ", "= −"), *self.shown_past()])
 
 
 def _walked(a, state, start, like):

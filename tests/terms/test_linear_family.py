@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import json
+
 import numpy as np
 import pytest
 from scipy.integrate import simpson
@@ -15,6 +17,7 @@ from procgen.checks.kalman import Kalman
 from procgen.spec.model import SpecError
 from procgen.spec.reader import read_text
 from procgen.terms import catalogue
+from procgen.terms.base import without_gap
 from procgen.terms.graph import build
 from procgen.terms.recover import forecast
 from procgen.terms.run import Run
@@ -329,3 +332,41 @@ def test_a_term_of_several_disturbances_cannot_be_correlated():
     rest = "correlation:\n  - {between: [x.local_level, y.ar], value: 0.5}"
     with pytest.raises(SpecError, match=r"expected a term that draws shocks, got x\.local_level"):
         graph_of(f"  x: {LEVEL}\n  y: {{ar: {{phi: 0.5, sd: 1}}}}", rest=rest)
+
+
+def test_gaps_of_several_paths_count_as_the_longest():
+    none, values = np.nan, np.array([[1.0, np.nan, np.nan], [2.0, 5.0, np.nan], [3.0, 6.0, np.nan]])
+    filled, gap = without_gap(values[:, :2], 7.0)
+    assert gap == 1 and filled.tolist() == [[7.0, 7.0], [2.0, 5.0], [3.0, 6.0]]
+    assert without_gap(np.array([[none, 1.0], [none, none], [2.0, 2.0]]), 0.0)[1] == 2
+    assert without_gap(values[:, 2:], 0.0)[1] == 3
+    assert without_gap(values[:, :1], 0.0)[1] == 0
+    kept, gap = without_gap(values, 0.0)  # a path that is all gap says nothing of the others
+    assert gap == 1 and kept[:, 1].tolist() == [0.0, 5.0, 6.0] and np.isnan(kept[1:, 2]).all()
+
+
+@pytest.mark.parametrize(
+    ("kind", "shown"),
+    [
+        ({"arima": {"d": 1, "phi": 0.5, "sd": 1}}, "(1 − 0.5 B) (1 − B) x[t] = a[t],  x = 0 up to step 0"),
+        (
+            {"arima": {"d": 1, "phi": 0.5, "theta": 0.3, "sd": 1, "before": {"x": [1, 2, 3], "shocks": [0.1, 0.2]}}},
+            "(1 − 0.5 B) (1 − B) x[t] = (1 + 0.3 B) a[t],  x[−2] = 2, x[−1] = 3,  a[−1] = 0.2",
+        ),
+        (
+            {"arima": {"d": 1, "seasonal": {"period": 12, "d": 1}, "sd": 1, "start": list(range(13))}},
+            "(1 − B)(1 − B^12) x[t] = a[t],  x[−12] = 0, x[−11] = 1, …, x[0] = 12",
+        ),
+        (
+            {"seasonal_random_walk": {"period": 4, "sd": 1, "start": [5, -2, -4, 1]}},
+            "x[t] = x[t−4] + a[t],  x[−3] = −2, x[−2] = −4, x[−1] = 1, x[0] = 5",
+        ),
+        (
+            {"seasonal_random_walk": {"period": 2, "sd": 1, "before": {"x": [1, 2]}}},
+            "x[t] = x[t−2] + a[t],  x[−2] = 1, x[−1] = 2",
+        ),
+    ],
+)
+def test_equations_show_the_values_that_they_go_on_from(kind, shown):
+    graph = graph_of(f"  x: {json.dumps(kind)}")
+    assert graph.series["x"].term.equation() == shown
