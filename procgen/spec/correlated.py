@@ -18,6 +18,12 @@ from procgen.spec.words import did_you_mean, one_of
 
 Rows = tuple[tuple[float, ...], ...]
 
+_TOGETHER = "or let the series that are to move together use one body under shared:"
+_REPAIR = (
+    "repair takes the nearest correlation matrix in place of a stated one, beside matrix: alone; write {names: […], "
+    "matrix: […], repair: true}, or remove it"
+)
+
 MAX_NAMES = 1000
 MOST_REPAIRED = 100
 SMALLEST = 1e-10  # below this a matrix is singular to rounding, and a draw would be a copy of others
@@ -208,6 +214,10 @@ class _Pairs:
         sources = [f"{target.owner}.{label}" for label in self.links.sources(target.owner)]
         if target.entry is not None and target.output is None and self.links.draws(target.entry):
             return ""
+        own = self.links.own(target.owner, target.entry)
+        if own and (target.entry is not None or not sources):
+            beside = f"name {one_of(sources)}" if sources else "put a term with plain shocks beside it and name that"
+            return f"the shocks of {one_of(own)} are its own and cannot be mixed with others'; {beside}, {_TOGETHER}"
         if not sources:
             return f"expected a term that draws shocks, got {name}; nothing in {target.owner} draws any"
         return f"expected a term that draws shocks, got {name}; in {target.owner} that is {one_of(sources)}"
@@ -220,6 +230,9 @@ def _read_item(tree: Tree, pairs: _Pairs, reader: Reading) -> None:
         reader.expected(tree, WAYS, hint)
         return
     before = len(reader.faults)
+    if "repair" in tree.value and forms[0] != "matrix":
+        reader.fault(tree.key("repair"), _REPAIR)
+        tree = Tree({key: inner for key, inner in tree.value.items() if key != "repair"}, tree.place, tree.keys)
     values = read_each(tree, FORMS[forms[0]], reader)
     names = _names(forms[0], values)
     if names is None:

@@ -175,6 +175,9 @@ class Reals(Domain):
         if tree.is_map and not varies(tree):
             return reader.expected(tree, self.describe())
         trees = tree.value if tree.is_list else (tree,)
+        wrong = [t for t in trees if isinstance(t.value, float) and not math.isfinite(t.value)]
+        if len(wrong) > 1:  # one fault for all of them: a gap in a table is rarely alone
+            return reader.expected(wrong[0], self.each.describe(), f"{len(wrong)} numbers of the list are not finite")
         values = tuple([self.each.read(t, reader) for t in trees])
         if len(values) < self.min_length:
             return reader.expected(tree, self.describe())

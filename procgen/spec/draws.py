@@ -31,7 +31,12 @@ class Interval(Domain):
         ends = tuple([Real().read(end, reader) for end in tree.value])
         if INVALID in ends:
             return INVALID
-        return ends if ends[0] < ends[1] else reader.expected(tree, self.describe(), f"got {ends[0]:g} and {ends[1]:g}")
+        if ends[0] < ends[1]:
+            return ends
+        low, high = sorted(ends)
+        mend = f"write [{low:g}, {high:g}]" if low < high else "give two, or write the number itself"
+        reader.fault(tree, f"expected the low end below the high one, got [{ends[0]:g}, {ends[1]:g}]; {mend}")
+        return INVALID
 
     def schema(self) -> Schema:
         return {"type": "array", "items": {"type": "number"}, "minItems": 2, "maxItems": 2}

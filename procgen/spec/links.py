@@ -68,6 +68,13 @@ class Links:
         kind = self.reader.catalogue.get(entry.kind)
         return kind is None or kind.noise or kind.takes_shock or getattr(kind, "correlates", False)
 
+    def own(self, owner: str, entry: Entry | None) -> list[str]:
+        """Return the names of an entry, or of all entries of a body, whose draws no other term's can be mixed with."""
+        labels = self.labels[owner].items()
+        found = [(label, e) for label, e in labels if (entry is None or e is entry) and not self.draws(e)]
+        kinds = [(label, self.reader.catalogue.get(e.kind)) for label, e in found]
+        return [f"{owner}.{label}" for label, kind in kinds if getattr(kind, "draws_alone", bool)()]
+
     def check(self) -> None:
         """Report every `use` of a name that does not exist, and uses that go in a circle."""
         uses = {}

@@ -7,14 +7,14 @@ series, as `{column: name}` of the group's table.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass, field
 from typing import Any
 
 from procgen.spec.declare import INVALID, Choice, Parameter, Real, read_each
 from procgen.spec.domains import FORMS, Reading
 from procgen.spec.draws import DrawOf, TableDraw
-from procgen.spec.model import Spec
+from procgen.spec.model import Fault, Spec
 from procgen.spec.tables import TABLE, read_lookup
 from procgen.spec.tree import Tree
 from procgen.spec.varying import PATH, SERIES, Varying, varying_of
@@ -43,6 +43,36 @@ def read_section(tree: Tree, reader: Reading) -> dict[str, Varying]:
         return {}
     found = {name: _declared(name, inner, reader) for name, inner in tree.value.items()}
     return {name: varying for name, varying in found.items() if varying is not INVALID}
+
+
+def unused(tree: Tree) -> Iterator[Fault]:
+    """Yield a fault for every declared parameter that nothing in a spec, its variants included, names.
+
+    Where some name is declared nowhere there is a fault already, which is likely the cause.
+    """
+    if not tree.is_map or "parameters" not in tree.value or not tree.value["parameters"].is_map:
+        return
+    section = tree.value["parameters"]
+    named = set(_mentioned(tree))
+    if named <= set(section.value):
+        for name in section.value:
+            if name not in named:
+                mend = f"write {{parameter: {name}}} in the place of a number, or remove it"
+                yield Fault(section.key(name).place, f"nothing uses the parameter {name[:100]}; {mend}")
+
+
+def _mentioned(tree: Tree) -> Iterator[str]:
+    """Yield every name in {parameter: name}, without recursion: trees may be deep."""
+    waiting = [tree]
+    while waiting:
+        inner = waiting.pop()
+        if inner.is_map:
+            name = inner.value.get("parameter")
+            if name is not None and isinstance(name.value, str):
+                yield name.value
+            waiting += inner.value.values()
+        elif inner.is_list:
+            waiting += inner.value
 
 
 def _declared(name: str, tree: Tree, reader: Reading) -> Any:

@@ -16,7 +16,7 @@ from procgen.spec.file import text_of
 from procgen.spec.groups import OWN, read_groups
 from procgen.spec.links import Links
 from procgen.spec.model import Correlation, Entry, Fault, Frozen, Place, Series, Shared, Spec, SpecError
-from procgen.spec.parameters import Known, check_tables, read_section, read_varying
+from procgen.spec.parameters import Known, check_tables, read_section, read_varying, unused
 from procgen.spec.places import Declared
 from procgen.spec.timegrid import MOST, TIME, read_time
 from procgen.spec.tree import TooMuch, Tree, from_data
@@ -119,7 +119,9 @@ def read_text(text: str, catalogue: Mapping[str, Any], laws: Mapping[str, Any], 
     file : name for the places in faults.
     """
     faults: list[Fault] = []
-    return _read(from_text(text, file, faults), faults, catalogue, laws, file)
+    tree = from_text(text, file, faults)
+    faults += () if tree is None else unused(tree)
+    return _read(tree, faults, catalogue, laws, file)
 
 
 def read_file(path: str | Path, catalogue: Mapping[str, Any], laws: Mapping[str, Any]) -> Spec:

@@ -127,6 +127,11 @@ class Term:
         """The hidden outputs of a term with these values, where they are not the same for all of its kind."""
         return cls.outputs
 
+    @classmethod
+    def draws_alone(cls) -> bool:
+        """Whether it has draws of its own, beside any shock that drives it."""
+        return cls.draws is not Term.draws
+
     def draws(self) -> tuple[Draw, ...]:
         """The primary streams that the term needs, in the order in which ``recurse`` receives them."""
         return ()

@@ -76,6 +76,9 @@ def test_a_matrix_a_group_and_pairs_mean_the_same():
          "expected a term that draws shocks, got c.random_walk; in c that is c.noise", "correlation.between[1]:40"),
         ("{between: [a.white_noise, d.constant], value: 0.1}",
          "expected a term that draws shocks, got d.constant; nothing in d draws any", "correlation.between[1]:40"),
+        ("{between: [a.white_noise, b.swing], value: 0.3, repair: true}", "repair takes the nearest correlation matrix "
+         "in place of a stated one, beside matrix: alone; write {names: […], matrix: […], repair: true}, or remove it",
+         "correlation.repair:62"),
         ("{between: [a.white_noise], value: 0.1}", "expected a list of two names such as load.arma, got a list of 1 "
          "(between: the two that are correlated)", "correlation.between:24"),
         ("{within: a, value: 0.1}", 'expected a list of at least two names such as load.arma, got "a" '
@@ -213,3 +216,30 @@ def test_too_many_names_of_one_copula():
     bodies = "".join(f"  s{i}: {{white_noise: {{sd: 1}}}}\n" for i in range(101))
     (found,) = faults(HEAD + "series:\n" + bodies + f"correlation: {{within: [{names}], value: 0.1, {T4}}}\n")
     assert found.startswith("expected at most 100 names in a t copula, got 101")
+
+
+BESIDE = "put a term with plain shocks beside it and name that"
+
+
+@pytest.mark.parametrize(
+    ("body", "own", "mend"),
+    [
+        ("arfima: {d: 0.3, sd: 1}", "x.arfima", BESIDE),
+        ("poisson: {mean: 3}", "x.poisson", BESIDE),
+        ("local_level: {level_sd: 1, noise_sd: 1}", "x.local_level", BESIDE),
+        ("[{inar: {alpha: 0.5, mean: 2}}, {white_noise: {sd: 1}}]", "x.inar", "name x.white_noise"),
+    ],
+)
+def test_shocks_that_are_a_terms_own_cannot_be_mixed(body, own, mend):
+    from procgen.chance.laws import LAWS as ALL
+    from procgen.spec.model import SpecError
+    from procgen.spec.reader import read_text
+    from procgen.terms import catalogue
+
+    body = body if body.startswith("[") else f"{{{body}}}"
+    spec = f"{HEAD}series:\n  x: {body}\n  y: {{white_noise: {{sd: 1}}}}\n"
+    said = f"the shocks of {own} are its own and cannot be mixed with others'; {mend}, or let the series that are to "
+    for name in (own, "x") if not body.startswith("[") else (own,):
+        with pytest.raises(SpecError) as error:
+            read_text(f"{spec}correlation: {{between: [y.white_noise, {name}], value: 0.3}}\n", catalogue(), ALL)
+        assert str(error.value).startswith(f"{said}move together use one body under shared:\n")

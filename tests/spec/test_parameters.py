@@ -102,7 +102,7 @@ def test_raw_and_digest():
      "period cannot vary, only numbers can; write a length of time above 0: a number of steps, or a text such as "
      "15min, 1d, 2 weeks\n  at series.x[0].seasonal.period"),
     ({"constant": {"draw": {"uniform": [2, 1]}, "over": "path"}},
-     "expected two numbers, the lower one first, as in [0.3, 0.9], got a list of 2; got 2 and 1 (between: the ends)\n"
+     "expected the low end below the high one, got [2, 1]; write [1, 2]\n"
      "  at series.x[0].constant.draw.uniform"),
     ({"constant": {"draw": {"uniforn": [1, 2]}, "over": "path"}},
      "expected one of uniform, normal, lognormal, beta, choice, got a mapping with the key uniforn; did you mean "
@@ -178,3 +178,35 @@ def test_a_table_must_have_every_path_and_series():
         spec.changed(paths=4)
     (told,) = faults([{"constant": {"from_table": {"key": "series", "values": {"y": 1}}}}])
     assert told == "the table of x.constant.level has no value for x; add a row, or take it out of there\n  at the spec"
+
+
+DECLARED = """procgen: 1
+seed: 7
+paths: 10
+time: {steps: 50}
+parameters:
+  pull: {draw: {uniform: [0.3, 0.9]}, over: path}
+  size: {draw: {uniform: [1, 2]}, over: path}
+series:
+  x: {ar: {phi: {parameter: %s}, sd: 1}}
+"""
+
+
+def test_a_parameter_that_nothing_uses_is_told():
+    with pytest.raises(SpecError) as error:
+        read_text(DECLARED % "pull", catalogue(), LAWS)
+    assert [str(fault) for fault in error.value.faults] == [
+        "nothing uses the parameter size; write {parameter: size} in the place of a number, or remove it\n"
+        "  at parameters.size (line 7, column 3)"
+    ]
+    read_text((DECLARED % "pull").replace("sd: 1", "sd: {parameter: size}"), catalogue(), LAWS)
+    with pytest.raises(SpecError) as error:  # a misspelt name is told once, as what it is
+        read_text(DECLARED % "pul", catalogue(), LAWS)
+    assert len(error.value.faults) == 1 and "did you mean pull?" in str(error.value)
+
+
+def test_numbers_of_a_list_that_are_not_finite_are_one_fault():
+    body = {"seasonal": {"period": 24, "profile": [float("nan")] * 20 + [1.0] * 4}}
+    (fault,) = faults(body)
+    assert "got .nan; 20 numbers of the list are not finite" in fault
+    assert fault.endswith("at series.x.seasonal.profile[0]")
