@@ -22,6 +22,7 @@ class Column:
     decimals: int | None = None
     unit: str | None = None
     revealed: bool = False
+    gaps: bool = False  # whether values may be missing: NaN in arrays, null in files
 
     @property
     def exact(self) -> bool:
@@ -29,7 +30,8 @@ class Column:
         return self.type == "float64" and self.decimals is None
 
     def json(self) -> dict[str, Any]:
-        return asdict(self)
+        told = asdict(self)
+        return told if self.gaps else {key: value for key, value in told.items() if key != "gaps"}
 
 
 def store(values: np.ndarray, column: Column) -> np.ndarray:
@@ -38,7 +40,7 @@ def store(values: np.ndarray, column: Column) -> np.ndarray:
     With d decimals, rint(x·10^d)/10^d: the product is rounded to the nearest whole number, an exact half to
     the even one, and the quotient is the double nearest to that decimal number. `int64` is rint; `float32`
     is the nearest one. Zero is stored without a sign. These are single IEEE 754 operations, hence the same
-    everywhere.
+    everywhere. What is missing stays so.
 
     Raises EnsembleError when a value does not fit the type.
     """

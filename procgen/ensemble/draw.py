@@ -45,8 +45,9 @@ class Drawer:
             start = step - block.first_step
             for column in self.source.columns:
                 values = tile[column.name]
-                if not np.isfinite(values).all():
-                    raise _not_finite(column, values, block.first_path, step)
+                wrong = np.isinf(values) if column.gaps else ~np.isfinite(values)
+                if wrong.any():
+                    raise _not_finite(column, values, wrong, block.first_path, step)
                 out[column.name][:, start : start + steps] = values.T
             step += steps
             self.tick(block.paths * steps)
@@ -83,8 +84,10 @@ class Drawer:
                 states[name] = values
 
 
-def _not_finite(column: Column, values: np.ndarray, first_path: int, first_step: int) -> EnsembleError:
-    step, path = np.argwhere(~np.isfinite(values))[0]
+def _not_finite(
+    column: Column, values: np.ndarray, wrong: np.ndarray, first_path: int, first_step: int
+) -> EnsembleError:
+    step, path = np.argwhere(wrong)[0]
     return EnsembleError(
         f"series {column.name}: the value at path {first_path + path}, step {first_step + step} is "
         f"{values[step, path]}, not a finite number; the process explodes or overflows there: "

@@ -91,7 +91,7 @@ class Form:
         """The rows of a unit in a rectangle, from values (paths, steps) as they are stored."""
         import pyarrow as pa
 
-        data = [array(values[column.name], arrow_type(column.type)) for column in unit]
+        data = [array(values[column.name], arrow_type(column.type), column.gaps) for column in unit]
         return pa.Table.from_arrays([*self._index(block, unit).values(), *data], schema=self.schema)
 
     def _index(self, block: Block, unit: Unit) -> dict[str, pa.Array]:
@@ -131,7 +131,7 @@ class Form:
         """Stored values (paths, steps) by name; EnsembleError where a row is not what belongs there."""
         shape = block.paths, block.steps
         self._expect_index(table, block, where)
-        return {c.name: exactly(flat(table, c.name, where), c, where).reshape(shape) for c in unit}
+        return {c.name: exactly(flat(table, c.name, where, c.gaps), c, where).reshape(shape) for c in unit}
 
     def _expect_index(self, table: pa.Table, block: Block, where: object) -> None:
         for role, name in self.names.items():
@@ -158,10 +158,12 @@ class Panel(Form):
 
         units = owned(self.columns)
         types = {some[0].type for some in units}
-        value = pa.field(self.value, arrow_type(types.pop() if len(types) == 1 else "float64"), nullable=False)
+        kind = arrow_type(types.pop() if len(types) == 1 else "float64")
+        value = pa.field(self.value, kind, nullable=any(some[0].gaps for some in units))
         beside = [labels(some) for some in units]
+        gappy = {label for some in units for label, c in zip(labels(some), some[1:], strict=True) if c.gaps}
         revealed = [
-            pa.field(label, pa.float64(), nullable=not all(label in some for some in beside))
+            pa.field(label, pa.float64(), nullable=label in gappy or not all(label in some for some in beside))
             for label in dict.fromkeys(label for some in beside for label in some)
         ]
         return pa.schema([*self._index_fields(), value, *revealed])
@@ -172,10 +174,11 @@ class Panel(Form):
         index = {"id": pa.repeat(unit[0].name, block.rows), **self._index(block, unit)}
         kind = self.schema.field(self.value).type
         main = np.ascontiguousarray(values[unit[0].name], kind.to_pandas_dtype())
-        beside = {label: values[c.name] for label, c in zip(labels(unit), unit[1:], strict=True)}
-        data = [array(main, kind)]
+        beside = {label: (values[c.name], c.gaps) for label, c in zip(labels(unit), unit[1:], strict=True)}
+        data = [array(main, kind, unit[0].gaps)]
         for place in self.schema.names[len(index) + 1 :]:
-            data.append(array(beside[place], pa.float64()) if place in beside else pa.nulls(block.rows, pa.float64()))
+            some, gaps = beside.get(place, (None, False))
+            data.append(pa.nulls(block.rows, pa.float64()) if some is None else array(some, pa.float64(), gaps))
         return pa.Table.from_arrays([*index.values(), *data], schema=self.schema)
 
     def wanted(self, unit: Unit, names: Container[str]) -> Unit:
@@ -192,7 +195,9 @@ class Panel(Form):
             if name not in places and table.column(name).null_count < table.num_rows:
                 raise EnsembleError(f"{where} is damaged: column {name} has values where {unit[0].name} has none")
         shape = block.paths, block.steps
-        return {c.name: exactly(flat(table, name, where), c, where).reshape(shape) for name, c in places.items()}
+        return {
+            c.name: exactly(flat(table, name, where, c.gaps), c, where).reshape(shape) for name, c in places.items()
+        }
 
     def _expect_id(self, table: pa.Table, name: str, block: Block, where: object) -> None:
         import pyarrow.compute as pc
@@ -211,8 +216,8 @@ class Nested(Form):
     def _schema(self) -> pa.Schema:
         import pyarrow as pa
 
-        lists = [pa.list_(pa.field("element", arrow_type(c.type), nullable=False)) for c in self.columns]
-        fields = [_field(c.name, kind, c) for c, kind in zip(self.columns, lists, strict=True)]
+        lists = [pa.list_(pa.field("element", arrow_type(c.type), nullable=c.gaps)) for c in self.columns]
+        fields = [_field(c.name, kind, c, False) for c, kind in zip(self.columns, lists, strict=True)]
         return pa.schema([*self._index_fields(), *fields])
 
     def pieces(self, row_bytes: int) -> Iterator[Block]:
@@ -230,7 +235,7 @@ class Nested(Form):
         ends = array(np.arange(block.paths + 1, dtype=np.int32) * np.int32(block.steps), pa.int32())
         lists = []
         for column in unit:
-            inside = array(values[column.name], arrow_type(column.type))
+            inside = array(values[column.name], arrow_type(column.type), column.gaps)
             lists.append(pa.ListArray.from_arrays(ends, inside, type=self.schema.field(column.name).type))
         index = [array(self._of_rows(role, block), self._kind(role)) for role in self.names]
         return pa.Table.from_arrays([*index, *lists], schema=self.schema)
@@ -252,7 +257,7 @@ class Nested(Form):
         lists = table.column(column.name)
         sizes = numbers(pc.list_value_length(lists), column.name, where)
         expect(where, f"{column.name} (its length)", sizes[:, None], np.full((block.paths, 1), block.steps), block)
-        return numbers(pc.list_flatten(lists), column.name, where).reshape(block.paths, block.steps)
+        return numbers(pc.list_flatten(lists), column.name, where, column.gaps).reshape(block.paths, block.steps)
 
 
 class Wide(Form):
@@ -285,7 +290,7 @@ class Wide(Form):
 
         kind, data = arrow_type(unit[0].type), values[unit[0].name]
         index = [array(self._at(role, block), self._kind(role)) for role in self.names]
-        return pa.Table.from_arrays([*index, *(array(path, kind) for path in data)], schema=self.schema)
+        return pa.Table.from_arrays([*index, *(array(path, kind, unit[0].gaps) for path in data)], schema=self.schema)
 
     def needs(self, block: Block, unit: Unit) -> list[str]:
         return [*self.keys, *self._paths(block)]
@@ -294,7 +299,7 @@ class Wide(Form):
         for role, name in self.names.items():
             first = Block(block.first_path, 1, block.first_step, block.steps)
             expect(where, name, flat(table, name, where)[None], self._at(role, block)[None], first)
-        columns = [exactly(flat(table, name, where), unit[0], where) for name in self._paths(block)]
+        columns = [exactly(flat(table, name, where, unit[0].gaps), unit[0], where) for name in self._paths(block)]
         return {unit[0].name: np.stack(columns)}
 
 
@@ -303,11 +308,12 @@ def _ranges(whole: Block, row_bytes: int) -> Iterator[Block]:
     yield from cut(whole, max(min(GROUP_ROWS, BUFFER_BYTES // row_bytes), whole.steps))
 
 
-def _field(name: str, kind: pa.DataType, column: Column | None = None) -> pa.Field:
+def _field(name: str, kind: pa.DataType, column: Column | None = None, nullable: bool | None = None) -> pa.Field:
     import pyarrow as pa
 
     unit = {"unit": column.unit} if column is not None and column.unit else None
-    return pa.field(name, kind, nullable=False, metadata=unit)
+    nullable = column is not None and column.gaps if nullable is None else nullable
+    return pa.field(name, kind, nullable=nullable, metadata=unit)
 
 
 def arrow_type(name: str) -> pa.DataType:
@@ -317,22 +323,30 @@ def arrow_type(name: str) -> pa.DataType:
     return {"float64": pa.float64(), "float32": pa.float32(), "int64": pa.int64()}[name]
 
 
-def array(values: np.ndarray, kind: pa.DataType) -> pa.Array:
-    """An Arrow array over the same memory, where that is in one piece."""
+def array(values: np.ndarray, kind: pa.DataType, gaps: bool = False) -> pa.Array:
+    """An Arrow array over the same memory, where that is in one piece; with `gaps`, null for what is NaN."""
     import pyarrow as pa
 
+    if gaps:
+        flat_values = np.ascontiguousarray(values).reshape(-1)
+        return pa.array(flat_values, kind, mask=np.isnan(flat_values))
     return pa.Array.from_buffers(kind, values.size, [None, pa.py_buffer(np.ascontiguousarray(values).reshape(-1))])
 
 
-def flat(table: pa.Table, name: str, where: object) -> np.ndarray:
+def flat(table: pa.Table, name: str, where: object, gaps: bool = False) -> np.ndarray:
     """The numbers of a column; times as microseconds."""
-    return numbers(table.column(name), name, where)
+    return numbers(table.column(name), name, where, gaps)
 
 
-def numbers(column: pa.ChunkedArray, name: str, where: object) -> np.ndarray:
-    """The numbers of an Arrow column that has no missing ones; times as microseconds."""
+def numbers(column: pa.ChunkedArray, name: str, where: object, gaps: bool = False) -> np.ndarray:
+    """The numbers of an Arrow column, NaN for null where it may have `gaps`; times as microseconds."""
     import pyarrow as pa
 
+    if gaps:
+        import pyarrow.compute as pc
+
+        found = numbers(pc.fill_null(column, np.nan), name, where)
+        return np.where(np.isnan(found), found.dtype.type(np.nan), found)  # one NaN, whatever bits a file has
     if column.null_count:
         raise EnsembleError(f"{where} is damaged: column {name} has missing values")
     if column.num_chunks == 1:  # its memory as it is; `to_numpy` would import pandas for it
@@ -348,7 +362,7 @@ def exactly(values: np.ndarray, column: Column, where: object) -> np.ndarray:
         return values
     with np.errstate(all="ignore"):
         kept = values.astype(column.type)
-    if not np.array_equal(kept.astype(values.dtype), values):
+    if not np.array_equal(kept.astype(values.dtype), values, equal_nan=column.gaps):
         raise EnsembleError(f"{where} is damaged: a value of {column.name} is not of type {column.type}")
     return kept
 

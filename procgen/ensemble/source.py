@@ -49,8 +49,10 @@ class SpecSource:
                 self.graph.resolve(name)
         except KeyError as error:
             raise EnsembleError(f"cannot reveal: {error.args[0]}") from None
-        self.columns = [Column(s.name, s.type, s.decimals, s.unit) for s in spec.series.values()]
-        self.columns += [Column(name, revealed=True) for name in reveal]
+        self.columns = [
+            Column(s.name, s.type, s.decimals, s.unit, gaps=self.graph.gappy(s.name)) for s in spec.series.values()
+        ]
+        self.columns += [Column(name, revealed=True, gaps=self.graph.gappy(name)) for name in reveal]
         self.stamps = spec.time.stamps if spec.time.start is not None else None
         self.portable = self.graph.portable
         self.depth = deepest(self.graph)

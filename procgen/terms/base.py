@@ -99,6 +99,7 @@ class Term:
     by_rows: ClassVar[tuple[str, ...]] = ()  # parameters that may be rows, one value a path, in `recurse`
     finer: ClassVar[str] = ""  # the parameter that says in how many parts its body cuts a step; empty where none does
     burns_in: ClassVar[bool] = False  # whether `begin` reads its inputs from the first row on, a few rows at a time
+    gaps: ClassVar[bool] = False  # whether some of its values are missing; nothing but a factor may follow then
     portable: ClassVar[bool] = True
     why_not_portable: ClassVar[str] = ""
     longest: ClassVar[int | None] = None  # the most steps it can be drawn for; None when any number

@@ -103,7 +103,7 @@ class Product(Term):
     def invert(self, values, known, state, at):
         for part in known:
             if part is not None:
-                if not np.all(part != 0.0):
+                if np.any(part == 0.0):
                     return Unknown("a factor is 0 somewhere: what it multiplies is lost there")
                 values = values / part
         return values, {}
@@ -135,7 +135,7 @@ class Exp(Term):
         return exp(inputs[0]), state
 
     def invert(self, values, known, state, at):
-        if not np.all(values > 0.0):
+        if np.any(values <= 0.0):
             return Unknown("some values are not above 0, which an exponential always is")
         return log(values), {}
 

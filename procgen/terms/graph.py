@@ -59,6 +59,7 @@ class Graph:
             self._owner(name)
         self._correlate()
         self._refuse_uneven()
+        self._refuse_gaps()
         self._plan()
 
     def resolve(self, name: str) -> Node:
@@ -258,6 +259,25 @@ class Graph:
                 message = f"{names} have steps of different length; correlate what runs at the same pace"
                 raise SpecError((Fault(next(iter(self.spec.series.values())).place, message),))
 
+    def _refuse_gaps(self) -> None:
+        for name, series in self.spec.series.items():
+            if series.type == "int64" and gaps_of(self.series[name]) is not None:
+                message = f"an int64 cannot say that a value of {name} is missing"
+                raise SpecError((Fault(series.place, f"{message}; write decimals: 0 in place of type: int64"),))
+        for node in self.order([*self._owners.values()]):
+            if isinstance(node, Node) and not isinstance(node.term, Scaled | Hidden):
+                for part in node.inputs:
+                    if gaps_of(part) is not None:
+                        message = (
+                            f"{node.name} reads {part.name}, whose values are missing at some steps; expected "
+                            f"`missing` around the whole body of a series; put {node.term.kind} inside it"
+                        )
+                        raise SpecError((Fault(node.place, message),))
+
+    def gappy(self, name: str) -> bool:
+        """Whether what a name points to has missing values."""
+        return gaps_of(self.resolve(name)) is not None
+
     def _plan(self) -> None:
         """Decide which terms start jointly, and how far back everything must be drawn."""
         wanted = [*self._owners.values()]
@@ -329,6 +349,13 @@ class Graph:
                 )
         if faults:
             raise SpecError(tuple(faults))
+
+
+def gaps_of(node: Any) -> Node | None:
+    """The term that leaves values of a node out, or None."""
+    while isinstance(node, Node) and isinstance(node.term, Scaled):
+        node = node.inputs[0]
+    return node if isinstance(node, Node) and node.term.gaps else None
 
 
 def build(spec: Spec) -> Graph:

@@ -164,7 +164,7 @@ class Sigmoid(Elementwise):
         return self.low + (self.high - self.low) / (1.0 + rest)
 
     def invert(self, values, known, state, at):
-        if not np.all((values > self.low) & (values < self.high)):
+        if np.any((values <= self.low) | (values >= self.high)):
             return Unknown(f"some values are not between {number(self.low)} and {number(self.high)}")
         return _log_odds(values, self.low, self.high), {}
 

@@ -1,0 +1,100 @@
+"""Missing values: at random, or in gaps."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from procgen.spec.declare import Parameter, Real, Span
+from procgen.terms.base import Ahead, Draw, Term, number
+from procgen.terms.combine import OF
+from procgen.terms.flag import UNIFORM, Flag
+
+
+class Missing(Term):
+    kind = "missing"
+    family = "combination"
+    purpose = "its body with values left out, whatever they are: each by itself, or some steps in a row"
+    source = "Rubin (1976) for what is missing completely at random; Gilbert (1960) for gaps by a chain of two states"
+    example = "missing: {of: [{ar: {phi: 0.8, sd: 1}}], share: 0.1, gap: 5}"
+    knows = "of the values that are present, whatever is known of its body"
+    composition = True
+    gaps = True
+    outputs = ("missing",)
+    parameters = (
+        OF,
+        Parameter("share", "p", Real(above=0, below=1), "share of the values that are missing"),
+        Parameter(
+            "gap",
+            "ℓ",
+            Span(),
+            "mean length of a gap; when absent, every value is left out by itself",
+            default=None,
+            unit="steps",
+        ),
+    )
+
+    def __init__(self, values):
+        super().__init__(values)
+        self.chain = Flag({"share": self.values["share"], "stay": self.values["gap"], "spans": ()})
+
+    @classmethod
+    def check(cls, values):
+        share = values["share"]
+        if values["gap"] is not None and values["gap"] < max(1.0, share / (1.0 - share)):
+            least = max(1.0, share / (1.0 - share))
+            yield (
+                "gap",
+                f"expected gaps of at least {number(least)} steps for a share of {number(share)}, got "
+                f"{number(values['gap'])}: the next one could not come soon enough; raise gap, or lower share",
+            )
+
+    def draws(self):
+        return (Draw("gap", UNIFORM),)
+
+    def reach(self, head):
+        return (head, head)
+
+    def _out(self, body, missing):
+        # What is not finite in the body would pass for missing: it is made infinite, which a render refuses.
+        kept = np.where(np.isfinite(body), body, np.inf)
+        return {"": np.where(missing > 0.0, np.nan, kept), "missing": missing}
+
+    def begin(self, before):
+        drawn, state = self.chain.begin(before_of(before))
+        if not before.head:
+            return None, state
+        return self._out(before.inputs[0][len(before.inputs[0]) - before.head :], drawn), state
+
+    def recurse(self, inputs, state, at):
+        missing, state = self.chain.recurse(inputs[1:], state, at)
+        return self._out(inputs[0], missing), state
+
+    def ahead(self, steps, state, body, *chain):
+        return Ahead(body.mean, body.variance)
+
+    @property
+    def watched(self):
+        return ("missing",) if self.gap is None else ("missing after missing", "missing after present")
+
+    def events(self, values, cell, known, state, at):
+        return self.chain.events(np.where(np.isnan(values), 1.0, 0.0), cell, known, state, at)
+
+    def moments(self, axis, body):
+        enter, stay = self.chain.chances
+        return axis.offering(body, missing=axis.chain(self.address, UNIFORM, self.share, stay - enter))
+
+    def equation(self, body):
+        if self.gap is None:
+            return f"y[t] = {body}[t], missing with probability {number(self.share)} at each step by itself"
+        enter, stay = self.chain.chances
+        return (
+            f"y[t] = {body}[t], missing with probability {number(stay)} after a missing value, {number(enter)} after "
+            "one that is there"
+        )
+
+
+def before_of(before):
+    """What the chain is handed of the past: its own stream, and not the body."""
+    from dataclasses import replace
+
+    return replace(before, inputs=before.inputs[1:], peek=lambda i: before.peek(i + 1))
