@@ -6,6 +6,8 @@ from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
+from procgen.checks.words import joined
+
 if TYPE_CHECKING:
     from procgen.checks.verdict import Check
 
@@ -119,7 +121,7 @@ def title(verdict: str, found: Sequence[Coverage]) -> str:
         if not any(each.judged or each.still for each in found) or not blind:
             return "CANNOT BE JUDGED: no check of the behaviour could be made"
         rest = [side for side in SIDES if any(side in each.judged for each in blind)]
-        agreed = f"; only {_and(rest)} could be, and agree{'s' if len(rest) == 1 else ''}" if rest else ""
+        agreed = f"; only {joined(rest)} could be, and agree{'s' if len(rest) == 1 else ''}" if rest else ""
         names = _some([each.series for each in blind])
         return f"CANNOT BE JUDGED: nothing about the spread of {names} could be judged{agreed}"
     lacking: dict[tuple[str, ...], list[str]] = {}
@@ -131,14 +133,11 @@ def title(verdict: str, found: Sequence[Coverage]) -> str:
     unseen = {each.series for each in found if each.blind}
     named = [sum(name in unseen for name in series) for series in lacking.values()]
     groups = zip(lacking.items(), named, strict=True)
-    parts = [f"{_and(sides)} of {_some(series, most=many)}" for (sides, series), many in groups]
+    parts = [f"{joined(sides)} of {_some(series, most=many)}" for (sides, series), many in groups]
     moving = [each for each in found if not each.still and " ~ " not in each.series]
     common = [side for side in SIDES if all(side in each.judged for each in moving)]
-    return f"AGREES on {_and(common) or 'a part'} only: {_some(parts, '; ', sum(map(bool, named)))} could not be judged"
-
-
-def _and(words: Sequence[str]) -> str:
-    return " and ".join(filter(None, [", ".join(words[:-1]), *words[-1:]]))
+    left = _some(parts, "; ", sum(map(bool, named)))
+    return f"AGREES on {joined(common) or 'a part'} only: {left} could not be judged"
 
 
 def _some(words: Sequence[str], between: str = ", ", most: int = 0) -> str:

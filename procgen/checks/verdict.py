@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections import Counter
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
@@ -157,7 +157,10 @@ class Verdict:
 
     @property
     def headline(self) -> list[str]:
-        return headline(self.rows)
+        from procgen.checks.common import users
+
+        spec = getattr(self.origin, "spec", None)
+        return headline(self.rows, {} if spec is None else users(spec))
 
     def to_dict(self) -> dict[str, Any]:
         """The verdict as plain data, in the shape of `validate --json`."""
@@ -220,10 +223,13 @@ def _rank(row: Check) -> tuple[int, float]:
     return order[row.outcome], row.log_p if row.log_p is not None else 0.0
 
 
-def headline(rows: Sequence[Check], most: int = 8) -> list[str]:
-    """A line a series that departs, what explains most first; what is wrong with the structure before all."""
-    from procgen.checks.attribution import departures
-    from procgen.checks.words import sentence
+def headline(rows: Sequence[Check], shared: Mapping[str, Sequence[str]], most: int = 8) -> list[str]:
+    """A line a series that departs, what explains most first; what is wrong with the structure before all.
 
-    lines = [sentence(groups) for groups in departures(rows)]
+    `shared`: bodies that several series use, and these; they stand for series that depart alike.
+    """
+    from procgen.checks import common
+    from procgen.checks.attribution import departures
+
+    lines = common.lines(departures(rows), shared)
     return lines[:most] + ([f"and {len(lines) - most} more series, see the table"] if len(lines) > most else [])

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
@@ -46,6 +47,11 @@ _LEAST_P = math.log(1e-300)  # below this a p is only said to be smaller
 def many(count: int, what: str) -> str:
     """The count with its noun, such as 1 path or 1,000 paths."""
     return f"{count:,} {what}{'' if count == 1 else 's'}"
+
+
+def joined(words: Sequence[str]) -> str:
+    """Words in a row: a, b and c."""
+    return " and ".join(filter(None, [", ".join(words[:-1]), *words[-1:]]))
 
 
 def number(x: float | None, digits: int = 5) -> str:
