@@ -21,6 +21,15 @@ def may_stay(theory: Any, graph: Any, name: str) -> bool:
     return all(source.kind == PROCESS or source.key in bent for source in sources)
 
 
+def few_shocks(theory: Any) -> Any | None:
+    """The values and chances of the shocks of a series that is linear in one kind of them, where these are few."""
+    from procgen.theory.sources import IID
+
+    sources = list(theory.expression.sources)
+    one = len(sources) == 1 and sources[0].kind == IID and not theory.expression.terms
+    return sources[0].law.points if one else None
+
+
 def _inside(process: Any) -> Iterator[Any]:
     """The sources that a process is made of."""
     for ingredient in process.detail.ingredients:

@@ -245,4 +245,5 @@ def _rounding_noise(route: Route, x: NDArray, first_path: int) -> float:
             return np.inf
         change = (b - a) ** 2
     known = np.isfinite(change)
-    return 2 * float(change[known].mean()) if known.any() else 0.0
+    noise = 2 * float(change[known].mean()) if known.any() else 0.0
+    return np.inf if route.few is not None and route.few.hidden(noise) else noise

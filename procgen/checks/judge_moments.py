@@ -23,6 +23,7 @@ def moment_checks(gather: Gather, column: int) -> Iterator[Check]:
     plan = gather.plan.series[column]
     if plan.unknown:
         yield Check(plan.name, "moments", "", "level", outcome="untestable", note=plan.unknown)
+        yield from _laws(gather, column)
         return
     for i in range(len(plan.steps)):
         if plan.constant[i]:
@@ -180,7 +181,7 @@ def _laws(gather: Gather, column: int) -> Iterator[Check]:
             continue
         law = plan.scores[i].distribution
         if getattr(law.frozen, "spacing", 0.0):
-            yield from special.whole_numbers(plan.name, _at(plan, i), law.frozen, values[:, k], i)
+            yield from special.whole_numbers(plan.name, _at(plan, i), law.frozen, values[:, k], i, plan.grain)
             continue
         z = (values[:, k] - law.mean) / law.sd
         if plan.grain > 0.02 * law.sd / math.sqrt(len(values)):

@@ -146,8 +146,9 @@ def _law(series: str, sums: ShockSums) -> Iterator[Check]:
     gap = judge.kolmogorov(largest_gap(sums.counts), sums.n)
     yield Check.of(series, "shocks: distribution function", "all steps", "law", gap)
     if sums.scores.bounded:
-        fault = f"{sums.outside} shocks lie beyond the ends of the stated law" if sums.outside else ""
-        check = Check.fact(series, "shocks: within the law's ends", "all steps", fault, "no shock lies beyond them")
+        what, wrong, right = sums.scores.beyond
+        fault = f"{sums.outside} shocks {wrong}" if sums.outside else ""
+        check = Check.fact(series, f"shocks: {what}", "all steps", fault, right)
         check.kind = "law"
         yield check
 

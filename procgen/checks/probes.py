@@ -187,6 +187,8 @@ def plan_series(name: str, theory: Any, steps: int, grain: float, periods: Seque
         plan.coarse = _rounded(plan)
         plan.pool = _pool(plan, steps)
         _as_stored(plan)
+    else:
+        _laws_alone(plan)
     return plan
 
 
@@ -218,6 +220,19 @@ def _marginals(plan: SeriesPlan) -> None:
         law = partial(plan.theory.marginal, int(plan.steps[i]))
         if np.isfinite(plan.variance[i]) and (plan.gaussian or law() is not None):  # a normal law is always known
             plan.scores[i] = Scores(Marginal(law, float(plan.mean[i]), float(np.sqrt(plan.variance[i]))))
+
+
+def _laws_alone(plan: SeriesPlan) -> None:
+    """Known laws at three of the probes of a series without moments: about the median, by the quartiles."""
+    for i in sorted({0, len(plan.steps) // 2, len(plan.steps) - 1}):
+        law = plan.theory.marginal(int(plan.steps[i]))
+        if law is not None:
+            low, middle, high = law.ppf(np.array([0.25, 0.5, 0.75])).tolist()
+            plan.scores[i] = Scores(Marginal(partial(_same, law), middle, high - low))
+
+
+def _same(law: Any) -> Any:
+    return law
 
 
 def _product_sds(plan: SeriesPlan, pairs: Sequence[tuple[int, int]]) -> dict[tuple[int, int], float | None]:

@@ -13,6 +13,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.checks.few import Few, few_of
 from procgen.checks.kalman import Kalman
 from procgen.checks.scores import Scores
 from procgen.checks.tied import shock_of
@@ -22,6 +23,7 @@ SMALL_STATE = 64  # up to here it is preferred to undoing: it also knows how the
 COARSE = 0.5  # rounding beyond this share of the shock's standard deviation hides the shock
 SPAN = 50  # lags over which correlations between two series' shocks are followed
 _CACHED = 256
+FEW = ("among the law's values", "are none of the values of the stated law", "every shock is one of them")
 _BEYOND = 10.0  # no rounding moves a shock by more than this many times its own standard deviation
 
 
@@ -55,6 +57,7 @@ class Route:
     source: Any = None
     watched: tuple[str, ...] = ()  # events with a known chance that are counted on the way
     ranked: float | None = None  # the grain, which ranks take in exactly, where ranks given the past stand for shocks
+    few: Few | None = None  # how shocks of a law of few values are told apart; what comes out are then ranks
     stopped: str = ""  # why a tile could not be undone
     _means: OrderedDict[tuple[int, int], NDArray] = field(default_factory=OrderedDict, repr=False)
 
@@ -83,6 +86,8 @@ class Route:
         if carrier is not None:
             with np.errstate(all="ignore"):
                 z = carrier.tile(x)
+            if self.few is not None and isinstance(z, np.ndarray):
+                z = self.few.ranks(z, dither(first_path, x.shape[1], first_step, x.shape[0], self.series + " ") + 0.5)
             return self._taken(z, x, carrier)
         return np.full(x.shape, np.nan), None
 
@@ -95,7 +100,7 @@ class Route:
 
     def allow(self, noise: float) -> None:
         """Rounding adds the variance `noise` to a shock: so far it may carry one beyond the ends of its law."""
-        if self.scores is not None and noise < 1.0:
+        if self.scores is not None and self.few is None and noise < 1.0:
             self.scores.room = max(self.scores.room, min(_BEYOND * noise**0.5, COARSE))
 
     def needed(self, most: int) -> int | None:
@@ -165,6 +170,10 @@ def route(name: str, theory: Any, graph: Any, grain: float, same_draws: bool = T
             return Route(name, Scores(LAWS["uniform"]()), words, theory, graph, 0.0, ranked=grain, watched=watched)
         return _by_projection(name, theory, graph, grain, undone.reason if ranks is None else ranks.reason)
     words = f"recovered by undoing {name} down to {undone.source.name}"
+    few, left = few_of(undone.source.law, recovery(graph, name, 2), grain)
+    if few is not None:
+        scores, words = Scores(LAWS["uniform"](), FEW), f"ranks of the shocks, {words}"
+        return Route(name, scores, words, theory, graph, left, source=undone.source, few=few)
     return Route(name, Scores(undone.source.law), words, theory, graph, grain, source=undone.source)
 
 
@@ -229,6 +238,8 @@ def expected(a: Route, b: Route, space: Any) -> Expected:
         return Expected()
     if a.ranked is not None or b.ranked is not None:
         return Expected(unknown="what the ranks of two dependent series have in common is not computed")
+    if a.few is not None or b.few is not None:
+        return Expected(unknown="what the ranks of dependent shocks of few values have in common is not computed")
     if space.tied(left, right):
         return _of_tied(a, b, space)
     if a.kalman is None and b.kalman is None:

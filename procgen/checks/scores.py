@@ -22,6 +22,8 @@ _LIMIT = 8.3  # the size of a normal score that no shock of the stated law reach
 _CLEAR, _DOUBT = 1e-3, 0.1  # beyond an end by more than this is no rounding error; more room than this is unclear
 _ROOM = 1e-7  # how far beyond the ends of a bounded law a shock may lie by rounding in double precision
 
+ENDS = ("within the law's ends", "lie beyond the ends of the stated law", "no shock lies beyond them")
+
 
 class Scores:
     """Maps the standardised shocks of one law to scores, and binned counts to test statistics.
@@ -30,6 +32,8 @@ class Scores:
     ----------
     law : Law
         As in the chance room: `gaussian`, `distribution()`.
+    beyond : texts
+        Of the check that no shock lies where the law has none: its name, what is wrong with one, what is expected.
 
     Attributes
     ----------
@@ -37,8 +41,8 @@ class Scores:
         How far beyond the ends of a bounded law rounding may carry a shock.
     """
 
-    def __init__(self, law: Any):
-        self.law = law
+    def __init__(self, law: Any, beyond: tuple[str, str, str] = ENDS):
+        self.law, self.beyond = law, beyond
         self.gaussian = bool(law.gaussian)
         self.room = _ROOM
         self._summands: dict[tuple[int, int], Summand] = {}

@@ -38,16 +38,19 @@ def ranked(graph: Any, series: str, theory: Any, grain: float) -> Ranking | Unkn
     return way
 
 
-def whole_numbers(series: str, probe: str, law: Any, x: NDArray, seed: int) -> Iterator[Check]:
-    """A law of whole numbers (or multiples of something) at a probe: ranks spread over their steps, and the least.
+def whole_numbers(
+    series: str, probe: str, law: Any, x: NDArray, seed: int, grain: float = 0.0
+) -> Iterator[Check]:
+    """A law of whole numbers (or of few values) at a probe: ranks spread over their steps, and the least.
 
-    law: of the values x, with `spacing`, `cdf` and `ppf`.
+    law: of the values x, with `spacing`, `cdf` and `ppf`. grain: the distance of neighbouring values as stored, or 0.
     """
     if not math.isfinite(law.spacing):
         note = "values lie on several grids, whose law is not computed"
         yield Check(series, "law", probe, "law", outcome="untestable", note=note)
         return
-    below, upto = law.cdf(x - law.spacing / 2.0), law.cdf(x + law.spacing / 2.0)
+    reach = max(law.spacing, grain) / 2.0
+    below, upto = law.cdf(x - reach), law.cdf(x + reach)
     v = np.random.default_rng(seed).random(len(x))
     note = f"Anderson–Darling, {len(x)} paths, ranks spread over the chance of each value"
     yield Check.of(series, "law", probe, "law", judge.anderson_darling(below + v * (upto - below)), note)

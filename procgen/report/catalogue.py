@@ -12,6 +12,8 @@ from procgen.spec.declare import Parameter, Record, Records
 from procgen.spec.words import did_you_mean
 from procgen.terms import catalogue
 
+STANDARD = "a law has mean 0 and variance 1 before it is scaled by sd"
+WITHOUT_VARIANCE = ("stable",)
 SHOCK = "any noise-like term in place of sd, total_sd and law"
 
 

@@ -72,7 +72,7 @@ class Column(Domain):
             return False
         table = read_file(tree.value["file"], reader)
         by = asked["step"] or asked["time"]
-        if table is INVALID or not all(_has(table, name, tree, reader) for name in (asked["column"], by)):
+        if table is INVALID or not all(has_column(table, name, tree, reader) for name in (asked["column"], by)):
             return False
         steps = _steps(table[by], asked["time"] is not None, tree, reader)
         numbers = [Real().read(Tree(value, tree.value["column"].place), reader) for value in table[asked["column"]]]
@@ -89,7 +89,8 @@ class Column(Domain):
         return {"anyOf": [Reals().schema(), mapping_of(FILE), mapping_of(NUMBERS)]}
 
 
-def _has(table: dict[str, list[Any]], name: str, tree: Tree, reader: Reading) -> bool:
+def has_column(table: dict[str, list[Any]], name: str, tree: Tree, reader: Reading) -> bool:
+    """Whether the table of the file named in `tree` has a column; False after reporting that it has not."""
     if name in table:
         return True
     message = f"the table has no column {name}; it has {one_of(table)}; {did_you_mean(name, table)}"

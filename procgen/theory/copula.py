@@ -66,6 +66,8 @@ def hermite_coefficients(law: Any) -> np.ndarray:
     """c_k = E q(z) He_k(z) / sqrt(k!), k < TERMS: by Gauss-Legendre panels that meet at 0, where some laws bend."""
     if law.gaussian:
         return np.eye(1, TERMS, 1)[0]
+    if law.points is not None:
+        return _of_steps(law.points)
     z, weights = _panels()
     weighted = weights * quantiles_of_normals(law, z)
     out = np.empty(TERMS)
@@ -79,6 +81,20 @@ def hermite_basis() -> tuple[np.ndarray, np.ndarray]:
     """Points z, and rows (TERMS, points) whose products with f(z) are the coefficients of f."""
     z, weights = _panels()
     return z, np.array(list(_hermite(z))) * weights
+
+
+def _of_steps(points: Any) -> np.ndarray:
+    """The same of a law of few values: E 1(z > a) He_k(z) = He_k-1(a) phi(a) at each step a of its quantile."""
+    from scipy.special import ndtri
+
+    upto = np.cumsum(points.chances)[:-1]
+    at = np.where(upto < 0.5, ndtri(upto), -ndtri(np.cumsum(points.chances[::-1])[::-1][1:]))
+    density = np.exp(-0.5 * at * at) / np.sqrt(2.0 * np.pi)
+    rise, out = np.diff(points.values) * density, np.zeros(TERMS)
+    for k, now in enumerate(_hermite(at)):
+        if k + 1 < TERMS:
+            out[k + 1] = rise @ now / np.sqrt(k + 1.0)
+    return out
 
 
 def _panels() -> tuple[np.ndarray, np.ndarray]:

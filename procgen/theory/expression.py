@@ -19,7 +19,7 @@ from procgen.theory import known, monomials
 from procgen.theory.known import Known
 from procgen.theory.linear import At, Base, Linear, Sum
 from procgen.theory.monomials import Term, in_order
-from procgen.theory.sources import OPAQUE, Source, Space, roots
+from procgen.theory.sources import IID, OPAQUE, Source, Space, roots
 from procgen.theory.unknown import Unknown
 
 MOST_TERMS = 512
@@ -124,6 +124,9 @@ class Expression:
         for source in self.linear.sources:
             if source.kind == OPAQUE and not source.centred:
                 raise Unknown(source.reason)
+        for source in self.sources:
+            if source.kind == IID and source.law.moment(1) is None:
+                raise Unknown(f"{source.key} has a law without a mean")
         total = self.mean_path(steps)
         for term, c in self.terms.items():
             total = total + c * monomials.mean(self.space, term, steps)

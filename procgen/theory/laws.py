@@ -41,12 +41,16 @@ def marginal(x: Expression, step: int) -> Any:
         (term, c), level = next(iter(x.terms.items())), float(x.mean_path(at)[0])
         return _lognormal(x.space, term, c * float(term.coefficient(at)[0]), level, at)
     if not x.terms and len(x.linear) == 1:
-        (key, c), level = next(iter(x.linear.items())), float(x.mean(at)[0])
+        (key, c), level = next(iter(x.linear.items())), float(x.mean_path(at)[0])
         source = key.base.source if isinstance(key, At) and not key.base.phi else None
         if isinstance(key, At) and source is not None and source.kind == PROCESS:
             return Affine(source.detail.marginal(step - key.delay), level, c)
         if source is not None and source.kind == IID:
-            return Affine(source.law.distribution(), level, c * float(np.sqrt(source.variance)))
+            return Affine(source.law.distribution(), level, c * source.unit)
+    if not x.terms and x.linear and all(source.kind == IID and source.law.needs_spread for source in x.sources):
+        from procgen.theory.stable import stable_sum
+
+        return stable_sum(x, step)
     if any(source.kind == PROCESS and source.detail.discrete for source in x.sources):
         from procgen.theory.mixtures import normals_at
 

@@ -39,6 +39,7 @@ class Source:
     detail: Any = None  # the Garch behind a garch or squares source; the ingredients of an opaque one; the Process
     depends: frozenset[Source] = frozenset()
     reason: str = ""
+    unit: float = 1.0  # of independent shocks: what a shock of the law is multiplied by
     centred: bool = True  # False for an opaque source whose mean is not known either
 
     @property
@@ -136,6 +137,8 @@ class Space:
                 raise Unknown(one.reason)
             if one.kind == PROCESS:
                 raise Unknown(f"the covariance of {a.key} and {b.key} is not known in closed form")
+            if one.kind == IID and not np.isfinite(one.variance):
+                raise Unknown(f"infinite variance of {_named(one)}")
         if SQUARES in (a.kind, b.kind):
             return self._with_squares(a, b)
         if GARCH in (a.kind, b.kind) and not (_mean_spread(a) and _mean_spread(b)):
@@ -147,6 +150,9 @@ class Space:
 
     def law_correlation(self, a: Source, b: Source) -> tuple[float, float]:
         """Correlation of the values of two independent-in-time sources, and a bound on its numerical error."""
+        for one in (a, b):
+            if one.law.needs_spread:
+                raise Unknown(f"infinite variance of {_named(one)}")
         tie = self.tie(a, b) or NormalTie(self.normal_correlation(a, b))
         return tie.law_correlation(a.law, b.law)
 

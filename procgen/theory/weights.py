@@ -60,6 +60,14 @@ def weights_at(forms: Sided, steps: list[int]) -> np.ndarray:
     return np.stack([_weights(form, steps[side], top, top + depth + 1) for form, side in forms])
 
 
+def weights_below(form: Linear, step: int, deeper: float) -> np.ndarray:
+    """Weights of a form at a step on its shocks, newest first, as many times as far back as a variance needs."""
+    depth = int(np.ceil(_depth(form) * deeper)) + 1
+    if step + depth > LONGEST:
+        raise Unknown(f"weights on more than {LONGEST} shocks")
+    return _weights(form, step, step, step + depth)
+
+
 def _weights(form: Linear, step: int, top: int, count: int) -> np.ndarray:
     """Weights of the form at `step` on the shocks of steps top, top - 1, .., top - count + 1."""
     total = np.zeros(count)

@@ -7,7 +7,7 @@ from collections.abc import Callable
 from dataclasses import dataclass, fields
 from functools import lru_cache
 from itertools import pairwise
-from typing import Any, ClassVar, cast
+from typing import TYPE_CHECKING, Any, ClassVar, cast
 
 import numpy as np
 
@@ -16,6 +16,9 @@ from procgen.chance.blocks import Scratch, blockwise
 from procgen.chance.elementary import exp
 from procgen.chance.normal import normal_tail_of
 from procgen.spec.declare import Parameter, Real
+
+if TYPE_CHECKING:
+    from procgen.chance.laws.points import Points
 
 _LAST = 9.25  # the normal area beyond is the least that a quantile is built for
 _PANELS = 64
@@ -26,6 +29,8 @@ _PER_ROOT_2_PI = 0.3989422804014327
 class Law:
     """A law with mean 0 and variance 1, whose shocks are non-decreasing functions of one uniform.
 
+    A law that has no variance has a unit of its own, in which `spread` is told.
+
     A law declares its parameters and fields of the same names, and implements `_quantile` (value code, portable
     unless it says otherwise), `moment` and `distribution` (theory). ValueError when a parameter is out of its domain.
     """
@@ -35,6 +40,7 @@ class Law:
     parameters: ClassVar[tuple[Parameter, ...]] = ()
     gaussian: ClassVar[bool] = False
     portable: ClassVar[bool] = True
+    scaled_by: ClassVar[str] = "sd"  # or "spread", of a law that has no variance
 
     def __post_init__(self) -> None:
         for parameter in self.parameters:
@@ -81,6 +87,16 @@ class Law:
     def mean_size(self) -> float:
         """E abs(z) to about 1e-9, by portable operations."""
         return _mean_size(self)
+
+    @property
+    def needs_spread(self) -> bool:
+        """Whether it has no variance, so that only a `spread` can scale it."""
+        return self.scaled_by == "spread"
+
+    @property
+    def points(self) -> Points | None:
+        """The values and their chances of a law of finitely many values; None of a law with a density."""
+        return None
 
     @property
     def balanced(self) -> bool:
