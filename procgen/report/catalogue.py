@@ -13,7 +13,6 @@ from procgen.spec.words import did_you_mean
 from procgen.terms import catalogue
 
 STANDARD = "a law has mean 0 and variance 1 before it is scaled by sd"
-WITHOUT_VARIANCE = ("stable",)
 SHOCK = "any noise-like term in place of sd, total_sd and law"
 
 
@@ -139,7 +138,8 @@ def _law_page(name: str, width: int) -> str:
     lines += [_hanging("written as", f"law: {written}", 12, width), _hanging("source", law.source, 12, width)]
     if law.parameters:
         lines += ["", "parameters", *_parameters(law.parameters, width)]
-    return "\n".join([*lines, "", "every law has mean 0 and variance 1 before it is scaled by sd"])
+    unit = "it has no variance: white_noise scales it by `spread`" if law.scaled_by == "spread" else STANDARD
+    return "\n".join([*lines, "", unit])
 
 
 def purpose(law: type[Law]) -> str:

@@ -194,7 +194,7 @@ class _Terms:
         if not shocked and "law" in names and "spread" not in names and getattr(values["law"], "needs_spread", False):
             law, way = values["law"], "choose one that has"
             if self.kind.takes_shock:
-                way = f"write shock: {{white_noise: {{spread: …, law: {law.name}: …}}}} in place of law and sd"
+                way = f"write shock: {{white_noise: {{spread: …, law: {{{law.name}: …}}}}}} in place of law and sd"
             self.reader.fault(inner.value.get("law", inner), f"expected a law with a variance, {law} has none; {way}")
             return
         for name, message in joint_issues(self.kind.check, {**values, "shocked": shocked}):

@@ -137,8 +137,6 @@ class Space:
                 raise Unknown(one.reason)
             if one.kind == PROCESS:
                 raise Unknown(f"the covariance of {a.key} and {b.key} is not known in closed form")
-            if one.kind == IID and not np.isfinite(one.variance):
-                raise Unknown(f"infinite variance of {_named(one)}")
         if SQUARES in (a.kind, b.kind):
             return self._with_squares(a, b)
         if GARCH in (a.kind, b.kind) and not (_mean_spread(a) and _mean_spread(b)):

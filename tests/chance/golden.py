@@ -27,6 +27,9 @@ PARAMETERS = {
     "gamma": {"shape": 1.5},
     "lognormal": {"sigma": 0.5},
     "normal_mixture": {"components": ((0.6, -1, 0.5), (0.3, 0, 1), (0.1, 2, 3))},
+    "bernoulli": {"p": 0.3},
+    "empirical": {"values": (4, 1, 1, 2.5, 9, 0.5, 3), "smoothed": 0.4},
+    "stable": {"alpha": 1.5, "beta": 0.5},
 }
 
 

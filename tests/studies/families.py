@@ -10,6 +10,7 @@ from collections.abc import Iterator, Mapping
 from typing import Any
 
 _T = {"student_t": {"df": 6}}
+_SAMPLE = [4.1, 0.3, 2.2, 7.5, 2.2, 1.8, 3.3, 0.9, 12.4, 5.0, 2.7, 1.1]
 _REPEAT = {"after": "repeat"}
 _RECORD = [3.1, 5.2, 4.7, 6.3, 2.8, 5.9, 7.4, 6.6, 4.2, 3.9, 5.5, 8.1, 6.4, 5.8, 4.6, 3.3, 2.1, 4.4]
 _AR = [{"ar": {"phi": 0.6, "sd": 1}}]
@@ -169,6 +170,20 @@ FAMILIES: Mapping[str, Any] = {
                     }
                 }
             ],
+        }
+    },
+    "few values": {
+        "series": {
+            "a": [{"white_noise": {"sd": 2, "law": {"bernoulli": {"p": 0.3}}}}],
+            "b": [{"ar": {"phi": 0.5, "sd": 1, "law": {"bernoulli": {"p": 0.6}}}}],
+            "c": [{"white_noise": {"sd": 1, "law": {"empirical": {"values": _SAMPLE}}}}],
+            "d": [{"ma": {"theta": 0.4, "sd": 1, "law": {"empirical": {"values": _SAMPLE, "smoothed": True}}}}],
+        }
+    },
+    "without a variance": {
+        "series": {
+            "a": [{"white_noise": {"spread": 2, "law": {"stable": {"alpha": 1.6, "beta": 0.7}}}}],
+            "b": [{"ar": {"phi": 0.6, "shock": {"white_noise": {"spread": 1, "law": {"stable": {"alpha": 1.8}}}}}}],
         }
     },
     "bent": {

@@ -19,6 +19,8 @@ class ReferenceLaw:
     excess_kurtosis: float | None = 0.0
     highest_moment: float = np.inf
     skewness: float = 0.0
+    needs_spread = False
+    points = None
 
     @property
     def gaussian(self) -> bool:
