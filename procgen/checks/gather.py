@@ -99,7 +99,7 @@ class Gather:
         self.deviations = Powers(int(plan.offset[-1]))
         self.products = Powers(len(plan.products))
         self.crossed = Powers(sum(len(pair.places) for pair in plan.cross))
-        self.pooled = [Powers(1 + len(p.pool.lags)) if p.pool else None for p in plan.series]
+        self.pooled = [Powers(p.pool.size) if p.pool else None for p in plan.series]
         self.kept = Kept(len(plan.kept))
         self.routes = {name: way for name, way in plan.routes.items() if isinstance(way, Route)}
         scores = {name: way.scores for name, way in self.routes.items() if way.scores is not None}

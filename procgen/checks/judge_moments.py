@@ -9,9 +9,10 @@ import numpy as np
 
 from procgen.checks import judge, special
 from procgen.checks.gather import Gather
-from procgen.checks.judge import FEW_PATHS, Finding, Sample
-from procgen.checks.probes import CrossPlan, Pool, SeriesPlan
-from procgen.checks.sums import Powers
+from procgen.checks.judge import Finding
+from procgen.checks.judge_pools import pooled_checks
+from procgen.checks.limits import limit, sample_of
+from procgen.checks.probes import CrossPlan, SeriesPlan
 from procgen.checks.verdict import Check
 
 _QUANTILES = (0.01, 0.99)
@@ -33,7 +34,7 @@ def moment_checks(gather: Gather, column: int) -> Iterator[Check]:
     yield from _covariances(gather, column)
     yield from _growth(gather, column)
     yield from _laws(gather, column)
-    yield from _pooled(gather, column)
+    yield from pooled_checks(gather, column)
 
 
 def _constant(gather: Gather, column: int, i: int) -> Check:
@@ -79,48 +80,12 @@ def _mean_and_variance(gather: Gather, column: int, i: int) -> Iterator[Check]:
             variance = judge.variance(moments.covariance(k, k), sigma2, n - 1)
             yield Check.of(plan.name, "variance", _at(plan, i), "spread", variance)
         return
-    sample = _sample(gather.deviations, k)
-    yield _limit(plan, "mean", _at(plan, i), "level", sample, mu, 1, math.sqrt(sigma2))
+    sample = sample_of(gather.deviations, k)
+    yield limit(plan, "mean", _at(plan, i), "level", sample, mu, 1, math.sqrt(sigma2))
     product = gather.plan.products.index((column, i, i))
     sd = None if plan.coarse[i] else plan.product_sd.get((i, i))
-    sample, hidden = _sample(gather.products, product), plan.skewness(2) if sd is None else 0.0
-    yield _limit(plan, "variance", _at(plan, i), "spread", sample, sigma2, 2, sd, hidden)
-
-
-def _sample(powers: Powers, k: int) -> Sample:
-    n = int(powers.n[k])
-    return Sample.from_powers(n, powers.sums[:, k].tolist()) if n else Sample(0, math.nan, 0.0, 0.0, 0.0)
-
-
-def _limit(
-    plan: SeriesPlan,
-    what: str,
-    probe: str,
-    kind: str,
-    sample: Sample,
-    theory: float,
-    order: int,
-    sd: float | None,
-    hidden: float = 0.0,
-) -> Check:
-    """A check by a central limit theorem, where moments and paths allow it."""
-    if sample.n == 0:
-        return Check(plan.name, what, probe, kind, theory, outcome="untestable", note=plan.reason("covariance"))
-    if not plan.highest > 3 * order:
-        bound = (
-            f"moments are known to exist only below order {plan.highest:g}"
-            if plan.highest
-            else "how many moments exist is not known"
-        )
-        note = f"{bound}: the tail of this estimate is not that of a central limit theorem"
-        return Check(plan.name, what, probe, kind, theory, theory + sample.mean, outcome="untestable", note=note)
-    if sample.n < FEW_PATHS or sample.sd == 0.0:
-        note = f"only {sample.n} paths: reported, not judged"
-        return Check(plan.name, what, probe, kind, theory, theory + sample.mean, outcome="reported", note=note)
-    finding = judge.sample_mean(sample, theory, sd, hidden)
-    if kind == "spread":
-        finding = judge.of_scale(finding)
-    return Check.of(plan.name, what, probe, kind, finding)
+    sample, hidden = sample_of(gather.products, product), plan.skewness(2) if sd is None else 0.0
+    yield limit(plan, "variance", _at(plan, i), "spread", sample, sigma2, 2, sd, hidden)
 
 
 def _covariances(gather: Gather, column: int) -> Iterator[Check]:
@@ -142,14 +107,14 @@ def _covariances(gather: Gather, column: int) -> Iterator[Check]:
                 finding = judge.covariance(moments.covariance(a, b), s1, s2, known / (s1 * s2), moments.n - 1)
                 yield Check.of(plan.name, "covariance", probe, "memory", finding)
         else:
-            sample = _sample(gather.products, gather.plan.products.index((column, i, j)))
+            sample = sample_of(gather.products, gather.plan.products.index((column, i, j)))
             sd, variance = plan.product_sd.get((i, j)), float(plan.variance[i])
             if sd is not None:
-                yield _limit(plan, "covariance", probe, "memory", sample, known, 2, sd)
+                yield limit(plan, "covariance", probe, "memory", sample, known, 2, sd)
             else:
                 slope = sample.scaled(1 / variance)
                 what, hidden = "slope on the earlier step", plan.skewness(1) ** 2
-                yield _limit(plan, what, probe, "memory", slope, known / variance, 2, None, hidden)
+                yield limit(plan, what, probe, "memory", slope, known / variance, 2, None, hidden)
 
 
 def _growth(gather: Gather, column: int) -> Iterator[Check]:
@@ -203,58 +168,6 @@ def _laws(gather: Gather, column: int) -> Iterator[Check]:
             )
 
 
-def _pooled(gather: Gather, column: int) -> Iterator[Check]:
-    plan, powers = gather.plan.series[column], gather.pooled[column]
-    pool = plan.pool
-    if powers is None or pool is None:
-        return
-    if pool.coarse:
-        probe = f"steps {pool.first}–{pool.last - 1}"
-        yield Check(plan.name, "averages over steps", probe, "memory", outcome="untestable", note=pool.coarse)
-    for k, lag in enumerate(() if pool.coarse else (-1, *pool.lags)):
-        sample = _sample(powers, k)
-        if sample.n:
-            yield _pooled_one(plan, pool, k, lag, sample)
-    if plan.name not in gather.routes:
-        yield from _neighbours(plan, powers)
-
-
-def _pooled_one(plan: SeriesPlan, pool: Pool, k: int, lag: int, sample: Sample) -> Check:
-    """Average k of the pool: the mean (lag -1), the variance (lag 0), or the memory at a lag."""
-    probe = f"steps {pool.first}–{pool.last - 1}" + (f", lag {lag}" if lag > 0 else "")
-    theory = float(np.mean(pool.mean)) if lag < 0 else float(np.nanmean(pool.covariance[k - 1]))
-    what = "mean over steps" if lag < 0 else "variance over steps" if lag == 0 else "autocovariance over steps"
-    kind = "level" if lag < 0 else "spread" if lag == 0 else "memory"
-    if pool.exact is not None:
-        if lag < 0:
-            finding = judge.normal_mean(theory + sample.mean, theory, math.sqrt(float(pool.exact[0, 0])), sample.n)
-        else:
-            finding = judge.quadratic(theory + sample.mean, pool.exact[k], sample.n)
-        return Check.of(plan.name, what, probe, kind, finding)
-    if lag > 0 and pool.slope is not None:
-        variance = float(pool.covariance[0].mean())
-        slope = float(np.nanmean(pool.slope[k - 1]))
-        return _limit(plan, "slope over steps", probe, kind, sample.scaled(1 / variance), slope, 2, None)
-    sd = plan.square_sd if lag == 0 and sample.n >= FEW_PATHS else None
-    return _limit(plan, what, probe, kind, sample, theory, 1 if lag < 0 else 2, sd)
-
-
-def _neighbours(plan: SeriesPlan, powers: Powers) -> Iterator[Check]:
-    """Correlation of the neighbouring paths' averages, where no shocks say it more sharply."""
-    count, total = powers.pairs[:, 0]
-    sample = _sample(powers, 0)
-    if count < FEW_PATHS or not sample.sd > 0 or not plan.highest > 3:
-        return
-    r = float(total / count - sample.mean**2) / sample.sd**2
-    yield Check.of(
-        plan.name,
-        "neighbouring paths",
-        "averages over steps",
-        "dependence",
-        judge.neighbours(r, sample, int(count)),
-    )
-
-
 def cross_moments(gather: Gather, place: int) -> Iterator[Check]:
     """Covariances of two series at common probes."""
     pair = gather.plan.cross[place]
@@ -299,8 +212,8 @@ def _cross_one(
             yield Check.of(name, "covariance between series", probe, "dependence", finding)
         return
     weaker = a if a.highest <= b.highest else b
-    sample = _sample(gather.crossed, k).scaled(1 / float(b.variance[j]))
+    sample = sample_of(gather.crossed, k).scaled(1 / float(b.variance[j]))
     slope, hidden = known / float(b.variance[j]), a.skewness(1) * b.skewness(1)
-    check = _limit(weaker, "slope between series", probe, "dependence", sample, slope, 2, None, hidden)
+    check = limit(weaker, "slope between series", probe, "dependence", sample, slope, 2, None, hidden)
     check.series = name
     yield check

@@ -13,8 +13,9 @@ from itertools import chain
 import numpy as np
 from numpy.typing import NDArray
 
-from procgen.checks.blocks import BLOCK, Window, add_products, scratch
+from procgen.checks.blocks import BLOCK
 from procgen.checks.gather import Gather, Plan
+from procgen.checks.pools import PoolLane
 from procgen.checks.probes import SeriesPlan
 from procgen.checks.rectangles import Blocks, Values, first_values
 from procgen.checks.tree import Tree, ranges
@@ -35,7 +36,7 @@ class Lane:
         self.height = max(TILE // paths // BLOCK, 1) * BLOCK
         self.rest: dict[str, NDArray] = {}  # steps behind the last multiple of 64
         self.probes = np.full((paths, plan.offset[-1]), np.nan)
-        self.pools = [_PoolLane(p, paths) if p.pool else None for p in plan.series]
+        self.pools = [PoolLane(p.pool, paths) if p.pool else None for p in plan.series]
         self.prints = np.zeros((len(plan.series), paths), dtype=np.uint64)
         self.carriers = {name: way.start(first_path, paths) for name, way in self.sums.routes.items()}
         self.shocks = {name: sums.lane(paths) for name, sums in self.sums.shocks.items()}
@@ -122,48 +123,6 @@ def _tile(rest: NDArray | None, values: NDArray, at: int, count: int) -> NDArray
         tile[: min(old, count)] = rest[len(rest) - old :][:count]
     tile[old:] = values[:, max(at, 0) : at + count].T
     return tile
-
-
-class _PoolLane:
-    """Averages over a window of steps along each path."""
-
-    def __init__(self, series: SeriesPlan, paths: int):
-        assert series.pool is not None
-        self.pool = series.pool
-        self.window = Window(max(self.pool.lags), paths)
-        self.sums = np.zeros((1 + len(self.pool.lags), paths))
-        self.unknown = np.zeros(paths, dtype=bool)
-
-    def absorb(self, x: NDArray, step: int) -> None:
-        pool = self.pool
-        start, end = max(pool.first - step, 0), min(pool.last - step, len(x))
-        if start >= end:
-            return
-        at = step + start - pool.first  # place of the first new row in the window
-        mean = pool.mean[at : at + end - start, None]
-        rows = np.subtract(x[start:end], mean, out=scratch(end - start, x.shape[1], 1))
-        self.unknown |= ~np.isfinite(rows).all(axis=0)
-        add_products(self.sums[0], rows, None, start)
-        both = self.window.push(rows)
-        for k, lag in enumerate(pool.lags):
-            count = min(end - start, len(both) - lag)
-            if count <= 0:
-                continue
-            new, earlier = both[len(both) - count :], both[len(both) - lag - count : len(both) - lag]
-            if pool.slope is not None and lag:
-                slope = pool.slope[k, at + end - start - count : at + end - start, None]
-                new = np.subtract(new, slope * earlier, out=scratch(count, x.shape[1], 1))
-            add_products(self.sums[1 + k], new, earlier, end - count)
-
-    def averages(self) -> NDArray:
-        """(paths, 1 + lags): what is averaged along each path, minus its theory."""
-        pool = self.pool
-        width = pool.last - pool.first
-        sums = np.where(self.unknown, np.nan, self.sums)
-        for k, lag in enumerate(pool.lags):
-            if pool.slope is None or not lag:
-                sums[1 + k] -= pool.covariance[k, lag:].sum()
-        return (sums / np.array([width] + [width - lag for lag in pool.lags])[:, None]).T
 
 
 class Pass:

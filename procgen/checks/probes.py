@@ -15,11 +15,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.checks import rounding
+from procgen.checks.pools import Pool, noise, plan_pool
 from procgen.checks.saddle import summand
 from procgen.checks.scores import Scores
 
-GAUSSIAN_WINDOW = 96  # steps of a pooled statistic with an exact law (its cost grows with the cube)
-WINDOW = 4096  # steps of a pooled statistic without one
 PAIR_LIMIT = 36  # pairs of series that are compared
 
 
@@ -109,24 +108,6 @@ class SeriesPlan:
         return f"rounded to {self.grain:g}, too coarse against a standard deviation of {sd:.3g}"
 
 
-@dataclass
-class Pool:
-    """Averages over a window of steps: what is averaged along each path, minus its theory.
-
-    The deviation itself, its square, and lagged products: the products themselves where their law is exact, else what
-    is left of them beside the stated slope, x(t) x(t - lag) - slope x(t - lag)^2, whose law is hardly skewed.
-    """
-
-    first: int
-    last: int  # the window is first .. last - 1
-    lags: tuple[int, ...]
-    mean: NDArray  # of the window
-    covariance: NDArray  # (lags, window): Cov(x(t), x(t - lag)), NaN where t - lag lies before the window
-    exact: NDArray | None = None  # (1 + lags, window): eigenvalues of each average, where its law is exact
-    slope: NDArray | None = None  # (lags, window): of x(t) on x(t - lag), where there is no exact law
-    coarse: str = ""  # why rounding leaves the averages without a theory
-
-
 class Marginal:
     """A known law at a probe, made to look like a law of standardised shocks (so that Scores can read it).
 
@@ -158,8 +139,10 @@ class Marginal:
         return (self.frozen.ppf(p) - self.mean) / self.sd
 
 
-def plan_series(name: str, theory: Any, steps: int, grain: float, periods: Sequence[int]) -> SeriesPlan:
-    """The plan of one series from its theory."""
+def plan_series(
+    name: str, theory: Any, steps: int, grain: float, periods: Sequence[int], blind: bool = False
+) -> SeriesPlan:
+    """The plan of one series from its theory; `blind` when its shocks cannot be recovered."""
     at = np.array(probe_steps(steps), dtype=np.int64)
     mean, variance = theory.mean(at), theory.variance(at)
     unknown = [theory.reason(what) or "not known" for what, x in (("mean", mean), ("variance", variance)) if x is None]
@@ -185,7 +168,7 @@ def plan_series(name: str, theory: Any, steps: int, grain: float, periods: Seque
         if not plan.gaussian:
             plan.product_sd = _product_sds(plan, [*((i, i) for i in range(len(at))), *plan.pairs])
         plan.coarse = _rounded(plan)
-        plan.pool = _pool(plan, steps)
+        plan.pool = plan_pool(plan, steps, blind)
         _as_stored(plan)
     else:
         _laws_alone(plan)
@@ -207,7 +190,7 @@ def _rounded(plan: SeriesPlan) -> NDArray[np.bool_]:
 def _as_stored(plan: SeriesPlan) -> None:
     """Mean and variance of the rounded values."""
     plan.mean = plan.mean.copy()
-    plan.variance = np.where(plan.drawn > 0, plan.drawn + _rounding(plan.grain), plan.drawn)
+    plan.variance = np.where(plan.drawn > 0, plan.drawn + noise(plan.grain), plan.drawn)
     for i, (mean, variance) in plan.rounded.items():
         plan.mean[i], plan.variance[i] = mean, variance
 
@@ -263,66 +246,6 @@ def _product_sd(plan: SeriesPlan, i: int, j: int) -> float | None:
         return None
     variance = float(squares[0]) + float(plan.variance[i] * plan.variance[j]) - known**2
     return float(np.sqrt(variance)) if variance > 0 else None
-
-
-def _pool(plan: SeriesPlan, steps: int) -> Pool | None:
-    width = min(steps, GAUSSIAN_WINDOW if plan.gaussian else WINDOW)
-    if width < 8:
-        return None
-    first = steps - width
-    window = np.arange(first, steps, dtype=np.int64)
-    lags = [0, 1, 2] + ([plan.period] if plan.period and 2 < plan.period < width // 2 else [])
-    mean = plan.theory.mean(window)
-    rows = np.full((len(lags), width), np.nan)
-    for k, lag in enumerate(lags):
-        values = plan.theory.covariance(window[lag:], window[: width - lag])
-        if values is None:
-            return None
-        rows[k, lag:] = values
-    if not np.isfinite(rows[0]).all() or not rows[0].max() > 0:
-        return None
-    sds = np.sqrt(rows[0][rows[0] > 0])
-    rows[0] += _rounding(plan.grain)
-    pool = Pool(first, steps, tuple(lags), mean, rows)
-    pool.coarse = _coarse_window(plan, first, float(sds.min()))
-    pool.exact = _eigenvalues(plan, window, tuple(lags)) if plan.gaussian else None
-    if pool.exact is None:
-        pool.slope = np.zeros(rows.shape)
-        for slope, row, lag in zip(pool.slope, rows, lags, strict=True):
-            earlier = rows[0, : width - lag]
-            np.divide(row[lag:], earlier, out=slope[lag:], where=earlier > 0)
-    return pool
-
-
-def _coarse_window(plan: SeriesPlan, first: int, smallest: float) -> str:
-    """Why rounding hides the averages over a window from `first` on, or nothing."""
-    inside = plan.coarse & (plan.steps >= first)
-    hidden = plan.gaussian and plan.grain > rounding.GAUSSIAN_COARSE * smallest
-    return plan.too_coarse(smallest) if hidden or inside.any() else ""
-
-
-def _rounding(grain: float) -> float:
-    return grain * grain / 12
-
-
-def _eigenvalues(plan: SeriesPlan, window: NDArray, lags: tuple[int, ...]) -> NDArray | None:
-    """Eigenvalues of each average as a quadratic form in independent normals."""
-    gamma = plan.theory.covariance(window[:, None], window[None, :])
-    if gamma is None:
-        return None
-    width = len(window)
-    gamma = 0.5 * (gamma + gamma.T) + _rounding(plan.grain) * np.eye(width)
-    values, vectors = np.linalg.eigh(gamma)
-    root = vectors * np.sqrt(np.maximum(values, 0.0))
-    rows = [np.zeros(width)]
-    rows[0][0] = float(gamma.sum()) / width**2  # the variance of the mean over steps
-    for lag in lags:
-        form = np.zeros((width, width))
-        at = np.arange(lag, width)
-        form[at, at - lag] += 0.5
-        form[at - lag, at] += 0.5
-        rows.append(np.linalg.eigvalsh(root.T @ (form / (width - lag)) @ root))
-    return np.array(rows)
 
 
 @dataclass

@@ -2,7 +2,8 @@
 
 With q = (x − mean)² − variance, E q[t] q[t − k] is the autocovariance of squares, and its share of E q² is the slope of
 the squares on earlier ones (McLeod & Li 1983 test whether it is 0). What is left beside the stated slope,
-q[t] q[t − k] − slope q[t − k]², has mean 0; each path gives one average of it, and their spread gives the error.
+q[t] q[t − k] − slope q[t − k]², has mean 0; each path gives one average of it, and their spread gives the error. Stays
+in a regime of its own spread show at lags as long as they last.
 """
 
 from __future__ import annotations
@@ -14,15 +15,20 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from procgen.checks.blocks import Window, add_products
+from procgen.checks.blocks import Window, add_lagged, scratch
 from procgen.checks.judge import FEW_PATHS, Sample, sample_mean
 from procgen.checks.sums import Powers
 from procgen.checks.verdict import Check
 
-LAGS = (1, 4)
+LAGS = (1, 2, 4, 8, 16, 32)  # up to a quarter of the steps
 _ORDER = 4  # a square times a square
 _FEW = 5 * FEW_PATHS  # skewed sums of 200 paths by 100 steps were seen to hide all of their skewness
-HIDDEN = 4.0  # times the skewness that is seen: products of squares hide most of theirs until they meet their tail
+_MANY = 200  # steps over which the average of a path has met more of its tail
+
+
+def hidden(steps: int) -> float:
+    """Times the skewness that is seen: products of squares hide most of theirs until they meet their tail."""
+    return 2.0 if steps >= _MANY else 4.0
 
 
 @dataclass
@@ -32,33 +38,36 @@ class Squares:
     theory: Any
     variance: float  # of the values
     spread: float  # variance of their squares
+    lags: tuple[int, ...]
     slopes: tuple[float, ...]  # by lag
     highest: float  # order below which moments exist
+    steps: int
 
 
 def plan_squares(theory: Any, steps: int) -> Squares | None:
     """The squares of a series with the same covariances at all steps, where they are known; else None."""
     highest = float(theory.highest_moment or 0.0)
-    if theory.gaussian or theory.discrete or steps <= 4 * max(LAGS) or not highest > _ORDER:
+    if theory.gaussian or theory.discrete or steps < 8 or not highest > _ORDER:
         return None
     if not theory.stationarity.covariance_stationary:
         return None
     variance = theory.variance(np.array([0]))
-    squares = theory.autocovariance_of_squares(np.array([0, *LAGS]), 0)
+    lags = tuple(lag for lag in LAGS if lag <= steps // 4)
+    squares = theory.autocovariance_of_squares(np.array([0, *lags]), 0)
     if variance is None or squares is None or not np.isfinite(squares).all() or not squares[0] > 0:
         return None
     slopes = tuple(float(each / squares[0]) for each in squares[1:])
-    return Squares(theory, float(variance[0]), float(squares[0]), slopes, highest)
+    return Squares(theory, float(variance[0]), float(squares[0]), lags, slopes, highest, steps)
 
 
 class SquareLane:
-    """What is carried for one range of paths: sums by path, pairs, and the last rows."""
+    """What is carried for one range of paths: sums by path of q² and of its products, and the last rows."""
 
-    def __init__(self, paths: int):
-        self.sums = np.zeros((len(LAGS), paths))
-        self.counts = np.zeros(len(LAGS))
+    def __init__(self, lags: tuple[int, ...], paths: int):
+        self.sums = np.zeros((1 + len(lags), paths))
         self.unknown = np.zeros(paths, dtype=bool)
-        self.rows = Window(max(LAGS), paths)
+        self.rows = Window(max(lags), paths)
+        self.steps = 0
 
 
 class SquareSums:
@@ -66,36 +75,42 @@ class SquareSums:
 
     def __init__(self, plan: Squares):
         self.plan = plan
-        self.powers = Powers(len(LAGS))
+        self.powers = Powers(len(plan.lags))
 
     def lane(self, paths: int) -> SquareLane:
-        return SquareLane(paths)
+        return SquareLane(self.plan.lags, paths)
 
     def absorb(self, x: NDArray, first_step: int, lane: SquareLane) -> None:
         """Add a tile (steps, paths) of values."""
         mean = np.asarray(self.plan.theory.mean(np.arange(first_step, first_step + len(x))))
-        q = (x - mean[:, None]) ** 2 - self.plan.variance
+        q = np.subtract(x, mean[:, None], out=scratch(*x.shape, 1))
+        np.multiply(q, q, out=q)
+        q -= self.plan.variance
         lane.unknown |= ~np.isfinite(q).all(axis=0)
         rows = lane.rows.push(q)
-        for k, lag in enumerate(LAGS):
-            count = min(len(x), len(rows) - lag)
-            if count > 0:
-                later, earlier = rows[len(rows) - count :], rows[len(rows) - lag - count : len(rows) - lag]
-                add_products(lane.sums[k], later - self.plan.slopes[k] * earlier, earlier, len(x) - count)
-                lane.counts[k] += count
+        for total, lag in zip(lane.sums, (0, *self.plan.lags), strict=True):
+            add_lagged(total, rows, rows, lag, len(x))
+        lane.steps += len(x)
 
     def finish(self, lane: SquareLane) -> None:
         """Close a range of paths; one with an unknown value is left out."""
-        if lane.counts.all():
-            sums = np.where(lane.unknown, np.nan, lane.sums)
-            self.powers.absorb((sums / lane.counts[:, None]).T / self.plan.spread)
+        if lane.steps <= max(self.plan.lags):
+            return
+        sums = np.where(lane.unknown, np.nan, lane.sums)
+        last = lane.rows.push(np.empty((0, sums.shape[1])))[::-1]
+        newest = np.add.accumulate(last * last, axis=0)
+        averages = [
+            (total - slope * (sums[0] - newest[lag - 1])) / (lane.steps - lag)  # all squares but the last ones
+            for total, lag, slope in zip(sums[1:], self.plan.lags, self.plan.slopes, strict=True)
+        ]
+        self.powers.absorb(np.array(averages).T / self.plan.spread)
 
     def merge(self, other: SquareSums) -> None:
         self.powers.merge(other.powers)
 
     def checks(self, series: str) -> Iterator[Check]:
         """The slope of the squares at each lag."""
-        for k, lag in enumerate(LAGS):
+        for k, lag in enumerate(self.plan.lags):
             yield self._check(series, k, f"lag {lag}")
 
     def _check(self, series: str, k: int, probe: str) -> Check:
@@ -107,4 +122,4 @@ class SquareSums:
         if n < _FEW or sample.sd == 0.0:
             note = f"only {n} paths: reported, not judged"
             return Check(series, what, probe, kind, theory, theory + sample.mean, outcome="reported", note=note)
-        return Check.of(series, what, probe, kind, sample_mean(sample, theory, times=HIDDEN))
+        return Check.of(series, what, probe, kind, sample_mean(sample, theory, times=hidden(self.plan.steps)))

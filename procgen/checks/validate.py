@@ -125,9 +125,10 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
     series, routes, precision = [], {}, []
     for name, declared in spec.series.items():
         grain = grain_of(declared, th[name], steps)
-        plan = plan_series(name, th[name], steps, grain, _periods(graph, name))
-        plan.may_stay = may_stay(th[name], graph, name)
         way = route(name, th[name], graph, grain, same_draws)
+        blind = isinstance(way, Cannot) or way.scores is None
+        plan = plan_series(name, th[name], steps, grain, _periods(graph, name), blind)
+        plan.may_stay = may_stay(th[name], graph, name)
         series.append(plan)
         routes[name] = way
         random = th[name].random
@@ -135,8 +136,8 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
         precision.append(Precision(name, declared.type, declared.decimals, random, lumpy(th[name]), reach))
     ways = [way for way in routes.values() if isinstance(way, Route) and way.scores is not None]
     pairs = {(a.series, b.series): expected(a, b, th.axis.space) for a, b in list(combinations(ways, 2))[:PAIR_LIMIT]}
-    blind = [name for name, way in routes.items() if isinstance(way, Cannot) or way.scores is None]
-    squares = {name: found for name in blind if (found := plan_squares(th[name], steps)) is not None}
+    unseen = [name for name, way in routes.items() if isinstance(way, Cannot) or way.scores is None]
+    squares = {name: found for name in unseen if (found := plan_squares(th[name], steps)) is not None}
     return Plan(steps, series, precision, plan_cross(series, th.cross), routes, pairs, squares)
 
 

@@ -277,6 +277,20 @@ class MixedSeries(SeriesTheory):
 
         return self._try("variance_of_mean", lambda: self.mixture.average(answer))
 
+    def fourth_moment_of_mean(self, count: int) -> float | None:
+        n = np.array([count])
+
+        def answer(nodes: list[Node]) -> list[NDArray]:
+            if not all(node.theory[self.name].gaussian for node in nodes):
+                raise Unknown("given its parameters it is not Gaussian")
+            means = [self._running_mean(node, n) for node in nodes]
+            middle = sum_of(nodes, means)
+            within = [self._ask(node, "variance_of_mean", n) for node in nodes]
+            apart = [(x - middle) ** 2 for x in means]
+            return [3 * v * v + 6 * v * d + d * d for v, d in zip(within, apart, strict=True)]
+
+        return self._try("fourth_moment_of_mean", lambda: float(self.mixture.average(answer)[0]))
+
     def _running_mean(self, node: Node, n: NDArray) -> NDArray:
         """The mean of the first n means given the parameters."""
         last = int(np.max(n, initial=1))

@@ -174,6 +174,16 @@ class SeriesTheory:
         steady = self.stationarity.covariance_stationary
         return self._try("variance_of_mean", lambda: memory.variance_of_mean(self.expression, n, steady))
 
+    def fourth_moment_of_mean(self, count: int) -> float | None:
+        """E (m - E m)^4 of the mean m of the first `count` steps (of any as many where covariances do not move)."""
+
+        def answer() -> float:
+            if not self.gaussian:
+                raise Unknown("the law of a mean of what is not Gaussian is not known")
+            return 3 * float(_known(self, "variance_of_mean", np.array([count]))[0]) ** 2
+
+        return self._try("fourth_moment_of_mean", answer)
+
     def forecast_variance(self, horizons, given: str = "values") -> np.ndarray | None:
         """Variance of the error of the best linear forecast h >= 1 steps ahead, long after the start.
 
@@ -344,6 +354,14 @@ class CrossTheory:
         """Why the last answer was None."""
         del name
         return self._reason
+
+
+def _known(series: SeriesTheory, what: str, *args: Any) -> Any:
+    """An answer of its own, or Unknown with the reason."""
+    value = getattr(series, what)(*args)
+    if value is None:
+        raise Unknown(series.reason(what) or f"{what} is not known")
+    return value
 
 
 def _steps(steps) -> np.ndarray:

@@ -18,7 +18,7 @@ from procgen.checks import judge, judge_shocks
 from procgen.checks.judge import Finding, Sample
 from procgen.checks.scores import BINS, Scores, cluster_scores
 from procgen.checks.shocks import CrossSums, ShockSums
-from procgen.checks.squares import HIDDEN
+from procgen.checks.squares import hidden
 from tests.studies.calibration import Case, Findings, far, of_one_number
 
 Rng = np.random.Generator
@@ -119,7 +119,7 @@ def squares_slope(draw: Draw, n: int, steps: int) -> Findings:
 
     def findings(rng: Rng, count: int) -> Iterator[tuple[Finding, int]]:
         q = draw(rng, (steps, count, n)) ** 2 - 1
-        return sample_findings(np.einsum("tcn,tcn->cn", q[1:], q[:-1]) / (steps - 1), None, times=HIDDEN)
+        return sample_findings(np.einsum("tcn,tcn->cn", q[1:], q[:-1]) / (steps - 1), None, times=hidden(steps))
 
     return findings
 
@@ -389,6 +389,7 @@ CASES = (
     Case("slope between series, 2,000 lognormals (σ 1)", 200_000, slope_of(lognormal(1.0), 2000, 6.18), 2000),
     Case("slope of squares, 200 paths of 20 steps, Laplace", 100_000, squares_slope(laplace, 200, 20), 4000),
     Case("slope of squares, 2,000 paths of 20 steps, Laplace", 10_000, squares_slope(laplace, 2000, 20), 40_000),
+    Case("slope of squares, 500 paths of 200 steps, Laplace", 5_000, squares_slope(laplace, 500, 200), 100_000),
     Case("neighbouring paths, 100 normal averages", 2_000_000, paths_side_by_side(normal, 100), 100),
     Case("neighbouring paths, 100 exponentials", 2_000_000, paths_side_by_side(exponential, 100), 100),
     Case("neighbouring paths, 100 lognormals (σ 1)", 2_000_000, paths_side_by_side(lognormal(1.0), 100), 100),

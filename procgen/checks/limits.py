@@ -1,0 +1,48 @@
+"""Averages over paths whose law is not exact: judged by a central limit theorem, where moments and paths allow it."""
+
+from __future__ import annotations
+
+import math
+
+from procgen.checks import judge
+from procgen.checks.judge import FEW_PATHS, Sample
+from procgen.checks.probes import SeriesPlan
+from procgen.checks.sums import Powers
+from procgen.checks.verdict import Check
+
+
+def sample_of(powers: Powers, k: int) -> Sample:
+    """Statistic k of the paths in which it is known."""
+    n = int(powers.n[k])
+    return Sample.from_powers(n, powers.sums[:, k].tolist()) if n else Sample(0, math.nan, 0.0, 0.0, 0.0)
+
+
+def limit(
+    plan: SeriesPlan,
+    what: str,
+    probe: str,
+    kind: str,
+    sample: Sample,
+    theory: float,
+    order: int,
+    sd: float | None,
+    hidden: float = 0.0,
+) -> Check:
+    """A check by a central limit theorem, where moments and paths allow it."""
+    if sample.n == 0:
+        return Check(plan.name, what, probe, kind, theory, outcome="untestable", note=plan.reason("covariance"))
+    if not plan.highest > 3 * order:
+        bound = (
+            f"moments are known to exist only below order {plan.highest:g}"
+            if plan.highest
+            else "how many moments exist is not known"
+        )
+        note = f"{bound}: the tail of this estimate is not that of a central limit theorem"
+        return Check(plan.name, what, probe, kind, theory, theory + sample.mean, outcome="untestable", note=note)
+    if sample.n < FEW_PATHS or sample.sd == 0.0:
+        note = f"only {sample.n} paths: reported, not judged"
+        return Check(plan.name, what, probe, kind, theory, theory + sample.mean, outcome="reported", note=note)
+    finding = judge.sample_mean(sample, theory, sd, hidden)
+    if kind == "spread":
+        finding = judge.of_scale(finding)
+    return Check.of(plan.name, what, probe, kind, finding)
