@@ -18,6 +18,7 @@ from procgen.theory.known import Known
 from procgen.theory.lattice import Rounded
 from procgen.theory.laws import is_gaussian
 from procgen.theory.linear import At, Base, Linear
+from procgen.theory.parallel import ParallelGarch
 from procgen.theory.processes import Chain, Curved, Held, Hinged, Process, Seen, mean_at
 from procgen.theory.sources import GARCH, IID, PROCESS, Source, Space, roots
 from procgen.theory.stated import Stating
@@ -162,6 +163,25 @@ class Axis(Volatile, Stating):
             Source(f"{key} switching", GARCH, process.variance, law, owner=shocks, detail=process, depends=behind)
         )
         return self.offering(total, regime=state, variance=squares, white=self._noise(white))
+
+    def switching_garch(
+        self, key: str, law: Any, omega: Any, alpha: Any, beta: Any, transitions: Any, shares: Any, start: Any,
+        names: tuple[str, ...], owners: tuple[int, ...],
+    ) -> Expression:  # fmt: skip
+        """Shocks with a garch variance for each state of a chain of their own, given as for `states`."""
+        z = self.source(key, law, 1.0)
+        state = self.states(f"{key}.regime", law, transitions, shares, start, names, owners)
+        behind = frozenset(root for x in (z, state) for source in x.sources for root in roots(source))
+        process = ParallelGarch(law, omega, alpha, beta, States(transitions, shares, start), owners)
+        (shocks,) = z.sources
+        white = self._noise(
+            self.space.add(
+                Source(f"{key} switching", GARCH, process.variance, law, owner=shocks, detail=process, depends=behind)
+            )
+        )
+        path = known.constant(process.variance)
+        variance = opaque(self.space, (white,), f"the variance of {key}, which follows a hidden chain", path)
+        return self.offering(white, regime=state, variance=variance)
 
     def offering(self, x: Expression, **outputs: Expression) -> Expression:
         """x, with hidden outputs."""

@@ -102,6 +102,16 @@ FAMILIES: Mapping[str, Any] = {
             "z": [{"arch": {"omega": 0.7, "alpha": 0.3}}],
         }
     },
+    "switching garch": [
+        {
+            "switching_garch": {
+                "omega": {"calm": 0.1, "storm": 1},
+                "alpha": {"calm": 0.05, "storm": 0.3},
+                "beta": {"calm": 0.4, "storm": 0.3},
+                "durations": {"calm": 40, "storm": 8},
+            }
+        }
+    ],
     "regimes": [
         {
             "regimes": {

@@ -212,6 +212,11 @@ def switching_spread(values: dict, x: float) -> dict:
     return {"sd": {"n1": x, "n2": 1.5}, "law": values.get("law", "normal")} | moves
 
 
+def switching_variance(values: dict, x: float) -> dict:
+    weights = {"omega": {"n1": x, "n2": 3.0}, "alpha": {"n1": 0.1, "n2": 0.3}, "beta": {"n1": 0.5, "n2": x / 2}}
+    return switching_spread(values, x) | weights
+
+
 def branching(values: dict, x: float) -> dict:
     """Two branches, and how they follow each other."""
     return {"branches": dict(values["branches"])} | moving(values, x)
@@ -270,6 +275,7 @@ MEND = {
     "flag": switching,
     "chain": chaining,
     "switching_noise": switching_spread,
+    "switching_garch": switching_variance,
     "regimes": branching,
     "clip": bounded,
     "sigmoid": bounded,

@@ -35,6 +35,10 @@ RICH = {
     "lagged_volatility": "{lag: {of: [{stochastic_volatility: {scale: 1, phi: 0.9, eta: 0.3}}], by: 3}}",
     "before_walk": "{random_walk: {sd: 2, drift: 1, before: {x: [100]}}}",
     "switching_ar": "{ar: {phi: [0.6, 0.2], shock: {switching_noise: {sd: {a: 1, b: 3}, durations: {a: 9, b: 3}}}}}",
+    "switching_garch_ar": "{ar: {phi: 0.6, shock: {switching_garch: {omega: {a: 1, b: 2}, alpha: {a: 0.1, b: 0.3}, "
+    "beta: {a: 0.3, b: 0}, durations: {a: {mean: 9, stages: 2}, b: 3}}}}}",
+    "lagged_switching_garch": "{lag: {of: [{switching_garch: {omega: {a: 1, b: 2}, alpha: {a: 0.1, b: 0.3}, "
+    "beta: {a: 0.3, b: 0.5}, durations: {a: 9, b: 3}}}], by: 5}}",
     "started_regimes": "{regimes: {branches: {a: [{ar: {phi: 0.6, sd: 1}}], b: [{constant: 4}], c: [{random_walk: "
     "{sd: 1}}]}, transitions: [[0.8, 0.1, 0.1], [0, 0.5, 0.5], [0.3, 0.7, 0]], start: b}}",
     "lagged_regimes": "{lag: {of: [{regimes: {branches: {a: [{ar: {phi: 0.6, sd: 1}}], b: [{garch: {sd: 2, alpha: "
