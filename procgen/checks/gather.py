@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 from procgen.checks.errors import ErrorSums
 from procgen.checks.probes import CrossPlan, SeriesPlan
 from procgen.checks.recover import Cannot, Expected, Route, dither
-from procgen.checks.shocks import MEMORY_LAGS, SHOCK_ARRAYS, CrossSums, ShockSums
+from procgen.checks.shocks import FAR, MEMORY_LAGS, NEAR, SHOCK_ARRAYS, CrossSums, ShockSums
 from procgen.checks.special import EventSums
 from procgen.checks.squares import Squares, SquareSums
 from procgen.checks.structure import Precision, Structure
@@ -71,9 +71,15 @@ class Plan:
             self.routes[name].allow(variance)  # type: ignore[union-attr]
 
 
+_FELT = 1e-9  # a correlation of shocks that is more than rounding
+
+
 def sums_of(stated: Expected) -> CrossSums:
     """The sums that a pair of series is judged by."""
-    return CrossSums() if stated.tie is None else TiedSums(stated.same_sides)
+    if stated.tie is not None:
+        return TiedSums(stated.same_sides)
+    spread = any(abs(c) > _FELT for lag, c in stated.at.items() if lag)  # components of a system, as a rule
+    return CrossSums(FAR if spread else NEAR)
 
 
 def _joined(arrays: Sequence[NDArray]) -> NDArray:

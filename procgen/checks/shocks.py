@@ -192,13 +192,17 @@ def _runs(known: NDArray) -> dict[int, int]:
     return dict(zip(lengths.tolist(), counts.tolist(), strict=True))
 
 
+NEAR = (-2, -1, 0, 1, 2)  # lags at which two series are compared
+FAR = (*(-lag for lag in MEMORY_LAGS[::-1]), 0, *MEMORY_LAGS)  # where what is shared comes at several lags
+
+
 class CrossSums:
     """Products of the normal scores of two series at several lags.
 
     ``sums[lag]`` pairs series `a` at step t with series `b` at step t - lag.
     """
 
-    def __init__(self, lags: tuple[int, ...] = (-2, -1, 0, 1, 2)):
+    def __init__(self, lags: tuple[int, ...] = NEAR):
         self.lags = lags
         self.sums = {lag: np.zeros(2) for lag in lags}
 
