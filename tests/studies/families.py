@@ -102,6 +102,13 @@ FAMILIES: Mapping[str, Any] = {
             "z": [{"arch": {"omega": 0.7, "alpha": 0.3}}],
         }
     },
+    "constant correlation": {
+        "series": {
+            "x": [{"garch": {"sd": 0.45, "alpha": 0.06, "beta": 0.85}}],
+            "y": [{"garch": {"sd": 0.6, "alpha": 0.1, "beta": 0.8, "law": _T}}],
+        },
+        "correlation": [{"between": ["x.garch", "y.garch"], "value": 0.4}],
+    },
     "switching garch": [
         {
             "switching_garch": {
