@@ -186,7 +186,8 @@ def _try(spec: Spec, name: str, reader: Reader) -> None:
 
 def variant(spec: Spec, name: str) -> Spec:
     """Return a variant of a spec by its name, which it has; SpecError lists every fault."""
-    return settled(spec, _written(spec).variants[name])
+    found = settled(spec, _written(spec).variants[name])
+    return replace(found, written=replace(_written(found), variant=name))
 
 
 def settled(spec: Spec, settings: Iterable[Setting]) -> Spec:

@@ -42,6 +42,7 @@ class Written:
     catalogue: Mapping[str, Any]
     laws: Mapping[str, Any]
     variants: Mapping[str, tuple[Setting, ...]] = field(default_factory=dict)
+    variant: str = ""  # the name of the variant that it is
 
 
 def read_variants(tree: Tree, reader: Any) -> dict[str, tuple[Setting, ...]]:

@@ -1,0 +1,162 @@
+"""What the values of each series of a spec depend on, so that two specs can be compared without drawing.
+
+A recipe lists the terms behind a series: its own, those of what it uses, and those that its correlated shocks and
+joint starts need, each with its numbers and the addresses of its draws. Two series with one recipe have the same
+values; where recipes differ, the terms that differ are those that may have moved them.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Hashable, Iterator
+from dataclasses import dataclass
+from typing import Any
+
+from procgen.spec.draws import TableDraw
+from procgen.spec.entries import children, walk
+from procgen.spec.model import Entry, Spec
+from procgen.spec.varying import PATH, Varying, replaced
+from procgen.terms import catalogue
+from procgen.terms.graph import Graph, build
+
+Part = tuple[str, Hashable]
+Address = tuple[Hashable, ...]
+
+
+@dataclass(frozen=True)
+class Recipe:
+    """What a series is made of: terms by name in the order in which they are met, and where shocks are drawn."""
+
+    parts: tuple[Part, ...]
+    draws: frozenset[Address]
+
+    def moved_from(self, other: Recipe) -> tuple[str, ...]:
+        """Return the names of terms that differ from those of another recipe; () when the values are the same.
+
+        A name alone moves nothing: where something is drawn, its address stands in the recipe.
+        """
+        if [part for _, part in self.parts] == [part for _, part in other.parts]:
+            return ()
+        mine, theirs = self._by_name(), other._by_name()
+        names = [name for name in {**theirs, **mine} if mine.get(name) != theirs.get(name)]
+        return tuple(names) or ("the order of terms",)
+
+    def shares(self, other: Recipe) -> bool:
+        """Return whether some draw is the same, or nothing is drawn in either."""
+        return bool(self.draws & other.draws) or not (self.draws or other.draws)
+
+    def _by_name(self) -> dict[str, list[Hashable]]:
+        found: dict[str, list[Hashable]] = {}
+        for name, part in self.parts:
+            found.setdefault(name, []).append(part)
+        return found
+
+
+def recipes(spec: Spec) -> dict[str, Recipe]:
+    """Return the recipe of every series of a spec."""
+    kitchen = _Kitchen(spec)
+    return {name: kitchen.recipe(name) for name in spec.series}
+
+
+class _Kitchen:
+    """Follows what a series needs, each term once."""
+
+    def __init__(self, spec: Spec) -> None:
+        self.spec = spec
+        self.graph: Graph = build(spec)
+        self.drawn = {(s.stream.name, s.stream.label) for s in self.graph.sources}
+        owners: dict[str, Any] = {**spec.shared, **spec.series}
+        self.entries: dict[str, dict[str, Entry]] = {name: {} for name in owners}
+        for name, owner in owners.items():
+            for entry, _ in walk(owner.of):
+                self.entries[name].setdefault(entry.label, entry)
+        self.bodies = {name: owner.of for name, owner in owners.items()}
+        self.joint = {node.name: node.joint for node in self.graph.order() if getattr(node, "joint", None) is not None}
+
+    def recipe(self, name: str) -> Recipe:
+        series = self.spec.series[name]
+        parts: list[Part] = [(f"{name} as stored", (series.type, series.decimals))]
+        self._body(name, parts, set())
+        draws = {part[1][-1] for part in parts if isinstance(part[1], tuple) and len(part[1]) == _SIZE}
+        return Recipe(tuple(parts), frozenset(address for address in draws if address is not None))
+
+    def _body(self, owner: str, parts: list[Part], seen: set[int]) -> None:
+        parts.append((owner, ("a sum of", len(self.bodies[owner]))))
+        for entry in self.bodies[owner]:
+            self._entry(entry, owner, parts, seen)
+
+    def _entry(self, entry: Entry, owner: str, parts: list[Part], seen: set[int]) -> None:
+        name = f"{owner}.{entry.label}"
+        if id(entry) in seen:
+            parts.append((name, "again"))
+            return
+        seen.add(id(entry))
+        parts.append((name, self._own(entry, owner)))
+        if entry.kind == "use":
+            self._used(entry.values["name"], parts, seen)
+        for inner, is_shock in children(entry):
+            parts.append((name, "shock" if is_shock else "body"))
+            self._entry(inner, owner, parts, seen)
+        for other in self._starts_with(name):
+            self._entry(self.entries[other[0]][other[1]], other[0], parts, seen)
+
+    def _used(self, name: str, parts: list[Part], seen: set[int]) -> None:
+        owner, *rest = name.split(".")
+        if rest:
+            output = ".".join(rest[1:])
+            parts.append((name, ("used", output)))
+            self._entry(_with_output(self.entries[owner][rest[0]], output), owner, parts, seen)
+        elif id(self.bodies[owner]) in seen:
+            parts.append((owner, "again"))
+        else:
+            seen.add(id(self.bodies[owner]))
+            self._body(owner, parts, seen)
+
+    def _own(self, entry: Entry, owner: str) -> Hashable:
+        """Return what a term is by itself: kind, factor, numbers, bodies by name, its place in a mix, its address."""
+        times, values = (replaced(value, lambda v: self._varying(v, owner)) for value in (entry.times, entry.values))
+        stream = self._stream(owner)
+        address = (self.spec.seed, stream, entry.label) if (stream, entry.label) in self.drawn else None
+        counts = tuple([(name, len(body)) for name, body in entry.bodies.items()])
+        return entry.kind, times, values, counts, self._mix(f"{owner}.{entry.label}"), address
+
+    def _varying(self, varying: Varying, owner: str) -> Hashable:
+        by_name = varying.name and varying.over == PATH
+        where = varying.name if by_name else (self._stream(owner), varying.name or varying.label)
+        if isinstance(varying.law, TableDraw):
+            where = owner if varying.law.by_series else ""
+        return varying.law, varying.over, varying.scale, self.spec.seed, where
+
+    def _stream(self, owner: str) -> str:
+        return self.spec.series[owner].stream if owner in self.spec.series else owner
+
+    def _mix(self, name: str) -> Hashable:
+        """Return how the primary normals of a term are mixed from its own and those that lead it."""
+        if name not in self.spec.correlation.names:
+            return None
+        source = self.graph.source_of(name)
+        if source.group is None:
+            return None
+        sources = source.group.sources
+        row = source.group.factor[[s is source for s in sources].index(True)].tolist()
+        leaders = [(s.stream.seed, s.stream.name, s.stream.label, w) for s, w in zip(sources, row, strict=True) if w]
+        tied = [(copula.df, copula.names[0]) for copula in self.spec.correlation.copulas if name in copula.names]
+        alone = len(leaders) == 1 and leaders[0][-1] == 1.0 and not tied
+        return None if alone else (tuple(leaders), tuple(tied))
+
+    def _starts_with(self, name: str) -> Iterator[tuple[str, str]]:
+        """Yield the terms, owner and label, whose stationary past is drawn before that of this one, jointly."""
+        if name in self.joint:
+            _, place, sources = self.joint[name]
+            for source in sources[:place]:
+                owner, _, label = source.name.partition(".")
+                yield owner, label
+
+
+def _with_output(entry: Entry, output: str) -> Entry:
+    """Return the entry that has a hidden output: a term, or the shock that drives it."""
+    while output and output not in catalogue()[entry.kind].outputs_of(entry.values) and entry.shock is not None:
+        entry = entry.shock
+    return entry
+
+
+_SIZE = 6  # of what `_own` returns; what else is in a recipe says where something stands
