@@ -15,6 +15,7 @@ from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
     from procgen.api import load
+    from procgen.checks.difference import Difference, difference
     from procgen.checks.validate import validate
     from procgen.checks.verdict import Verdict
     from procgen.ensemble.check import check_digest
@@ -27,12 +28,14 @@ if TYPE_CHECKING:
 __version__ = "0.1.0"
 
 _HOMES = {
+    "Difference": "procgen.checks.difference",
     "Ensemble": "procgen.ensemble.ensemble",
     "EnsembleError": "procgen.ensemble.errors",
     "Spec": "procgen.spec.model",
     "SpecError": "procgen.spec.model",
     "Verdict": "procgen.checks.verdict",
     "check_digest": "procgen.ensemble.check",
+    "difference": "procgen.checks.difference",
     "load": "procgen.api",
     "open_ensemble": "procgen.ensemble.ensemble",
     "render": "procgen.ensemble.job",
@@ -40,6 +43,7 @@ _HOMES = {
 }
 
 __all__ = [
+    "Difference",
     "Ensemble",
     "EnsembleError",
     "Spec",
@@ -47,6 +51,7 @@ __all__ = [
     "Verdict",
     "__version__",
     "check_digest",
+    "difference",
     "load",
     "open_ensemble",
     "render",

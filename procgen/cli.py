@@ -8,7 +8,20 @@ from typing import Annotated
 import typer
 
 from procgen.console import guarded, printed, progress, run, said
-from procgen.options import Settings, Start, Variant, VariantOrAll, asked, one_asked, within
+from procgen.difference_command import HELP, difference
+from procgen.options import (
+    Expect,
+    Settings,
+    Start,
+    Variant,
+    VariantOrAll,
+    as_expected,
+    asked,
+    expected,
+    one_asked,
+    steps_of,
+    within,
+)
 
 CONTEXT = {"help_option_names": ["-h", "--help"]}
 app = typer.Typer(
@@ -58,14 +71,6 @@ Columns = Annotated[
     typer.Option(parser=roles_of, metavar="id=NAME,…", help="Other names for id, path, step, time and value."),
 ]
 Json = Annotated[bool, typer.Option("--json", help="Print JSON instead of text.")]
-
-
-def steps_of(text: str) -> tuple[int, ...]:
-    """Steps from `0,1,10`."""
-    parts = [part.strip() for part in text.split(",")]
-    if not all(part.isdecimal() and len(part) <= 12 for part in parts):
-        raise typer.BadParameter(f"expected steps from 0 on, such as 0,1,10, got {text!r}")
-    return tuple(int(part) for part in parts)
 
 
 def numbers_of(text: str) -> tuple[float, ...]:
@@ -139,12 +144,17 @@ def render(
     ] = False,
     overwrite: Annotated[bool, typer.Option("--overwrite", help="Remove the ensemble that is in OUT first.")] = False,
     scheduler: Scheduler = None,
+    expect: Expect = None,
 ) -> None:
-    """Draw paths of SPEC into the folder OUT: Parquet parts and manifest.json."""
+    """Draw paths of SPEC into the folder OUT: Parquet parts and manifest.json.
+
+    Ends with exit code 1 when the digest is not the one expected; the files are kept.
+    """
     import procgen as pg
     from procgen.report.rendered import rendered
 
     specs = asked(spec, variant, setting, start)
+    wanted = None if expect is None else expected(expect, specs)
     for name, loaded in specs.items():
         folder = within(out, name)
         with progress(f"drawing {name}".strip()) as tick:
@@ -169,6 +179,8 @@ def render(
     if len(specs) > 1:
         last = within(out, [*specs][-1])
         printed(f"all have the same shocks: procgen difference {within(out, 'base')} {last} tells what differs")
+    if wanted is not None:
+        raise typer.Exit(as_expected(out, wanted))
 
 
 @app.command(
@@ -335,7 +347,7 @@ def schema() -> None:
 @guarded
 def digest(
     out: Annotated[Path, typer.Argument(metavar="OUT", help="A rendered ensemble.", show_default=False)],
-    expect: Annotated[str | None, typer.Option(metavar="HEX", help="The digest it should have.")] = None,
+    expect: Expect = None,
     redraw: Annotated[
         bool, typer.Option("--redraw", help="Also draw some paths again; name the first difference.")
     ] = False,
@@ -350,6 +362,9 @@ def digest(
         result = check_digest(out, expect=expect, redraw=redraw, progress=tick)
     printed(result.text())
     raise typer.Exit(0 if result.ok else 1)
+
+
+app.command("difference", **HELP)(difference)
 
 
 def main() -> None:

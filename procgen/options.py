@@ -8,7 +8,10 @@ from typing import TYPE_CHECKING, Annotated
 
 import typer
 
+from procgen.console import printed, progress
+
 if TYPE_CHECKING:
+    from procgen.ensemble.expected import Expected
     from procgen.spec.model import Spec
 
 Variant = Annotated[
@@ -32,6 +35,13 @@ Settings = Annotated[
 ]
 Start = Annotated[
     str | None, typer.Option("--start", metavar="DATE", help="Date and time of step 0, instead of the spec's.")
+]
+Expect = Annotated[
+    str | None,
+    typer.Option(
+        metavar="HEX|MANIFEST",
+        help="The digest it should have, or an old manifest.json (or its folder), which also tells what moved.",
+    ),
 ]
 
 
@@ -66,3 +76,31 @@ def one_asked(file: Path, variant: str | None, settings: list[str] | None, start
 def within(out: str, name: str) -> str:
     """The folder of one of several ensembles; OUT itself where there is no name."""
     return os.path.join(out, name) if name and out else out
+
+
+def expected(given: str, specs: dict[str, Spec]) -> Expected:
+    """What one ensemble is expected to be, read before anything is drawn."""
+    from procgen.ensemble.expected import expected as read
+
+    if len(specs) > 1:
+        raise typer.BadParameter("one digest is that of one ensemble; leave out --variant all", param_hint="--expect")
+    return read(given)
+
+
+def as_expected(out: str, wanted: Expected) -> int:
+    """Print whether the ensemble in OUT is the one that was expected; the exit code."""
+    import procgen as pg
+    from procgen.ensemble.expected import departure
+
+    with progress("comparing") as tick:
+        text = departure(pg.open_ensemble(out), wanted, tick)
+    printed(text or "as expected")
+    return 1 if text else 0
+
+
+def steps_of(text: str) -> tuple[int, ...]:
+    """Steps from `0,1,10`."""
+    parts = [part.strip() for part in text.split(",")]
+    if not all(part.isdecimal() and len(part) <= 12 for part in parts):
+        raise typer.BadParameter(f"expected steps from 0 on, such as 0,1,10, got {text!r}")
+    return tuple(int(part) for part in parts)

@@ -14,8 +14,8 @@ PACKAGE = Path(__file__).parent.parent / "procgen"
 ROOMS = ["spec", "chance", "terms", "theory", "ensemble", "checks", "report"]
 FILES = sorted(PACKAGE.rglob("*.py"))
 LONGEST = 400
-# A verdict is public and writes itself: `to_text` and `to_html` call the report when they are called.
-UPWARD = {"checks/verdict.py": {"report"}}
+# A verdict is public and writes itself, and so is a difference: their texts call the report when they are called.
+UPWARD = {"checks/verdict.py": {"report"}, "checks/difference.py": {"report"}}
 
 
 def room(file: Path) -> str:

@@ -57,7 +57,7 @@ def rendered(tmp_path) -> Path:
 
 def test_help_names_every_command_and_shows_an_example_of_each():
     text = Result("-h").out
-    for name in ("render", "validate", "picture", "theory", "terms", "schema", "digest"):
+    for name in ("render", "validate", "picture", "theory", "terms", "schema", "digest", "difference"):
         assert f"  {name} " in text
         page = Result(name, "--help").out
         assert f"procgen {name}" in page.partition("Example")[2]
@@ -66,10 +66,13 @@ def test_help_names_every_command_and_shows_an_example_of_each():
 
 def test_the_options_are_those_that_were_promised():
     promised = {
-        "render": "-o --paths --first-path --steps --seed --workers --layout --reveal --resume --overwrite --scheduler",
+        "render": "-o --paths --first-path --steps --seed --workers --layout --reveal --resume --overwrite --scheduler "
+        "--variant --set --start --expect",
         "validate": "--spec --path-col --step-col --time-col --series-col --false-alarm --json --report --scheduler",
-        "theory": "--json --at --lags --frequencies --horizon",
+        "theory": "--json --at --lags --frequencies --horizon --variant --set --start",
+        "picture": "-o --variant --set --start",
         "digest": "--expect --redraw",
+        "difference": "--variant --at --json",
     }
     for name, options in promised.items():
         page = Result(name, "-h").out

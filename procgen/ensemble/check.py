@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import re
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -15,6 +14,8 @@ from procgen.ensemble.columns import store
 from procgen.ensemble.draw import Drawer, empty
 from procgen.ensemble.ensemble import Blocks, Ensemble, OnDisk
 from procgen.ensemble.errors import EnsembleError
+from procgen.ensemble.expected import departure
+from procgen.ensemble.expected import expected as read_expected
 from procgen.ensemble.manifest import Manifest, PartRecord, node
 from procgen.ensemble.plan import Block
 from procgen.ensemble.seal import contradictions, other_than_part, refuse_version
@@ -69,6 +70,7 @@ class DigestResult:
     damages: tuple[Damage, ...] = ()
     redrawn: tuple[Block, ...] = ()
     difference: Difference | None = None
+    departure: str = ""  # where the ensemble is not the one expected, and why
 
     @property
     def ok(self) -> bool:
@@ -88,7 +90,7 @@ class DigestResult:
             lines.append(f"{self.digest}  {verdict}")
         if self.expected is not None:
             same = self.expected == self.digest
-            lines.append("as expected" if same else f"expected {self.expected}: other values")
+            lines.append("as expected" if same else self.departure or f"expected {self.expected}: other values")
         if self.difference is not None:
             lines.append(f"first difference: {self.difference}")
         elif self.redrawn:
@@ -99,7 +101,7 @@ class DigestResult:
 
 def check_digest(
     path: str | Path | Ensemble,
-    expect: str | None = None,
+    expect: str | Path | None = None,
     redraw: bool = False,
     *,
     progress: Tick | None = None,
@@ -110,7 +112,8 @@ def check_digest(
     Parameters
     ----------
     path : folder that `render` has finished, or the ensemble that is in it.
-    expect : 64 hex digits that the ensemble's digest should be.
+    expect : 64 hex digits that the ensemble's digest should be; or an old manifest.json, or the folder of an old
+        ensemble, whose digest it should be: then the first value that differs is named, and what may have moved it.
     redraw : draw values again as well: those of damaged parts, or else of paths spread over the range (all of
         them up to 4 million rows), and name the first that differs.
     progress : called with (rows read, rows in all).
@@ -119,10 +122,7 @@ def check_digest(
     """
     if isinstance(path, Ensemble):
         path = _home(path)
-    if expect is not None:
-        expect = expect.strip().lower()
-        if not re.fullmatch("[0-9a-f]{64}", expect):
-            raise EnsembleError(f"expected a digest of 64 hex digits, got {expect!r}")
+    wanted = None if expect is None else read_expected(expect)
     folder = Folder(folder_path(path, "path"))
     data = folder.read_json(MANIFEST)
     if data is None:
@@ -146,11 +146,12 @@ def check_digest(
         path=str(path),
         digest=None if roots is None else digest.total({name: roots[name] for name in manifest.stored}),
         recorded=manifest.digest,
-        expected=expect,
+        expected=None if wanted is None else wanted.digest,
         series={} if roots is None else roots,
         damages=tuple(damages),
         redrawn=tuple(places),
         difference=reader.first_difference(places),
+        departure=departure(OnDisk(folder.path, manifest), wanted, progress) if wanted and not damages else "",
     )
 
 

@@ -47,8 +47,8 @@ def test_untouched_files_agree_in_every_way(made):
 def test_another_digest_than_expected_is_said(made):
     found = fake_check(made.path, expect="0" * 64)
     assert not found.ok
-    assert found.text().endswith(f"expected {'0' * 64}: other values")
-    with pytest.raises(EnsembleError, match="expected a digest of 64 hex digits, got 'abc'"):
+    assert f"\nexpected {'0' * 64}: other values\nto see where they differ: give the old manifest.json" in found.text()
+    with pytest.raises(EnsembleError, match="expected a digest of 64 hex digits, an old manifest"):
         fake_check(made.path, expect="abc")
 
 
