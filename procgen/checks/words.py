@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
@@ -22,7 +22,12 @@ _SHARES = {
     "jumps": "rate of jumps",
     "on": "share of steps that are on",
     "demand": "share of steps with demand",
+    "missing": "share of missing values",
+    "missing after present": "rate of new gaps",
+    "missing after missing": "share of gaps that go on",
 }  # "share: " and what follows; of all others "share of " and that
+_NAMES = {"slope of squares": "slope of squares on earlier squares"}
+_OUTCOMES = {"agrees": "agree", "departs": "depart"}  # of several
 _MORE_LESS = {"level": ("higher than", "lower than"), "spread": ("larger than", "smaller than")}
 _SIGNED = ("mean", "variance", "level score", "spread score")  # how the checks end whose sign says more or less
 _WHOLE = {
@@ -40,6 +45,7 @@ _CORRELATIONS = {
     "neighbouring paths": "standardised covariance of neighbouring paths",
     "clustering": "standardised covariance of sizes",
 }  # how checks end whose estimate is a correlation as long as spreads are as stated -> what it is in any case
+_DRAWN = ": distribution function"  # how the check of a drawn parameter ends
 FARTHEST = "farthest value"
 _LEAST_P = math.log(1e-300)  # below this a p is only said to be smaller
 
@@ -93,7 +99,13 @@ def name_of(row: Check) -> str:
         for end, other in _CORRELATIONS.items():
             if row.what.endswith(end):
                 return row.what.removesuffix(end) + other
-    return row.what
+    return _NAMES.get(row.what, row.what)
+
+
+def tally(counts: Mapping[str, int]) -> str:
+    """How many checks had which outcome, such as 1 departs, 40 agree."""
+    words = ((count, what if count == 1 else _OUTCOMES.get(what, what)) for what, count in sorted(counts.items()))
+    return ", ".join(f"{count:,} {what}" for count, what in words)
 
 
 def sentence(groups: list[list[Check]]) -> str:
@@ -127,6 +139,8 @@ def _seen(top: Check) -> str:
     """What was seen, in numbers."""
     if top.log_p is None and top.kind == "law":
         return top.note
+    if top.what.endswith(_DRAWN) and top.what not in _WHOLE:
+        return f"the distribution function of {top.what.removesuffix(_DRAWN)} is off by up to {number(top.estimate, 4)}"
     if top.what in _WHOLE and not top.probe.startswith("worst"):
         return _WHOLE[top.what].format(number(top.estimate, 4))
     if top.probe.startswith("worst"):

@@ -6,6 +6,7 @@ from textwrap import wrap
 from typing import Any
 
 from procgen.report.symbols import symbolic
+from procgen.spec.entries import walk
 from procgen.spec.model import Spec
 from procgen.terms.base import number
 from procgen.terms.combine import Scaled, Sum
@@ -41,10 +42,12 @@ class _Body:
         return lines
 
     def _own(self) -> list[Any]:
-        """The terms that belong to this body, inputs first; sums and factors show where they are used."""
+        """The terms that belong to this body, in the order of the spec; sums and factors show where they are used."""
         order = [n for n in self.graph.order([self.root]) if not isinstance(n, Source)]
         shocks = {id(n.inputs[-1]) for n in order if n.term.takes_shock}
-        return [
+        body = {**self.graph.spec.shared, **self.graph.spec.series}[self.owner].of
+        place = {f"{self.owner}.{entry.label}": at for at, (entry, _) in reversed([*enumerate(walk(body))])}
+        found = [
             n
             for n in order
             if n.name.partition(".")[0] == self.owner
@@ -52,6 +55,7 @@ class _Body:
             and not (isinstance(n.term, Sum) and n.name == self.owner)
             and id(n) not in shocks
         ]
+        return sorted(found, key=lambda n: place.get(n.name, len(place)))
 
     def _equations(self, node: Any) -> list[str]:
         names = [self._called(part) for part in node.inputs]

@@ -11,12 +11,13 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from procgen.checks import coverage
-from procgen.checks.words import name_of, number, p_text, sentence, sort_of
+from procgen.checks.attribution import departures
+from procgen.checks.words import many, name_of, number, p_text, sentence, tally
 from procgen.report.pictures import gallery as galleries
 from procgen.report.pictures import page
 from procgen.report.pictures.gallery import Gallery
 from procgen.report.pictures.page_style import PAGE
-from procgen.report.pictures.safe import escaped, many
+from procgen.report.pictures.safe import breakable, escaped
 from procgen.report.pictures.write import write
 from procgen.report.text import CAUTION, reported
 
@@ -96,10 +97,11 @@ def whole_page(gallery: Gallery | None, verdict: Verdict | None = None) -> str:
 def _lead(verdict: Verdict) -> Iterator[str]:
     about = verdict.about
     yield f'<p class="verdict {verdict.verdict}">{_TITLES[verdict.verdict]}</p>'
-    counts = ", ".join(f"{count} {what}" for what, count in sorted(verdict.counts.items()))
     size = f"{many(about['paths'], 'path')} × {many(about['steps'], 'step')}. " if "paths" in about else ""
-    yield f'<p class="facts">{escaped(verdict.title)}.</p>'
-    yield f'<p class="facts">{escaped(size)}{len(verdict.rows)} checks: {escaped(counts)}.</p>'
+    if verdict.verdict != "departs":  # then there is no more in it than stands above
+        yield f'<p class="facts">{escaped(verdict.title)}.</p>'
+    checks = f"{many(len(verdict.rows), 'check')}: {tally(verdict.counts)}"
+    yield f'<p class="facts">{escaped(size)}{escaped(checks)}.</p>'
     yield from (f'<p class="facts">{escaped(line)}.</p>' for line in reported(verdict))
     yield (
         '<p class="facts">Data of exactly the stated behaviour are called departing at most '
@@ -131,7 +133,7 @@ def _found(verdict: Verdict) -> Iterator[str]:
     lines = verdict.headline
     if lines:
         yield '<section><h2>What departs</h2><ul class="found">'
-        yield from (f"<li>{escaped(line)}</li>" for line in lines)
+        yield from (f"<li>{breakable(line)}</li>" for line in lines)
         yield "</ul></section>"
 
 
@@ -139,19 +141,17 @@ def _covered(verdict: Verdict) -> Iterator[str]:
     lines = list(coverage.lines(verdict.coverage))
     if lines:
         yield '<section><h2>What was judged</h2><ul class="plain">'
-        yield from (f"<li>{escaped(line)}</li>" for line in lines)
+        yield from (f"<li>{breakable(line)}</li>" for line in lines)
         yield "</ul></section>"
 
 
 def _by_series(verdict: Verdict | None) -> dict[str, Sequence[str]]:
-    """A sentence for each kind of departure of each series."""
-    groups: dict[tuple[str, str], list[Check]] = {}
-    for row in verdict.rows if verdict is not None else ():
-        if row.outcome == "departs":
-            groups.setdefault((row.series, sort_of(row)), []).append(row)
+    """A sentence for each kind of departure of each series, what explains most first."""
     found: dict[str, list[str]] = {}
-    for (series, _), rows in groups.items():
-        found.setdefault(series, []).append(sentence([rows]).removeprefix(f"{series}: "))
+    for groups in departures(verdict.rows if verdict is not None else ()):
+        for rows in groups:
+            series = rows[0].series
+            found.setdefault(series, []).append(sentence([rows]).removeprefix(f"{series}: "))
     return dict(found)
 
 
@@ -163,9 +163,11 @@ def _tables(verdict: Verdict) -> Iterator[str]:
     yield '<section id="checks"><h2>Checks, the largest disagreement first</h2>'
     yield from _table([*departs, *agrees[:OPEN]])
     if agrees[OPEN:]:
-        yield from _folded(f"{len(agrees[OPEN:]):,} more checks that agree", agrees[OPEN:])
+        more = len(agrees[OPEN:])
+        yield from _folded(f"{many(more, 'more check')} that {'agrees' if more == 1 else 'agree'}", agrees[OPEN:])
     if rest:
-        yield from _folded(f"{len(rest):,} checks that were not judged, with the reasons", rest)
+        were = "was not judged, with the reason" if len(rest) == 1 else "were not judged, with the reasons"
+        yield from _folded(f"{many(len(rest), 'check')} that {were}", rest)
     yield "</section>"
 
 
@@ -191,14 +193,14 @@ def _row(row: Check) -> str:
     if row.log_p is not None:
         width = min(4.0, -row.log_p / math.log(10) * 0.35)
         p = f'<span class="bar" style="width:{width:.2f}rem"></span>{p_text(row.log_p)}'
-    cells = [escaped(text) for text in (row.series, name_of(row), row.probe)]
+    cells = [breakable(text) for text in (row.series, name_of(row), row.probe)]
     figures = [number(x) for x in (row.theory, row.estimate, row.standard_error)]
     return (
         f'<tr class="{row.outcome}">'
         + "".join(f"<td>{cell}</td>" for cell in cells)
         + "".join(f'<td class="n">{figure}</td>' for figure in figures)
         + f'<td class="p">{p}</td><td class="n">{number(row.detectable, 3)}</td>'
-        + f'<td class="{row.outcome}">{row.outcome}</td><td class="note">{escaped(_words(row))}</td></tr>'
+        + f'<td class="{row.outcome}">{row.outcome}</td><td class="note">{breakable(_words(row))}</td></tr>'
     )
 
 

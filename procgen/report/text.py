@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING
 
 from procgen.checks import coverage
 from procgen.checks.judge import FEW_PATHS
-from procgen.checks.words import name_of, number, p_text
+from procgen.checks.words import many, name_of, number, p_text, tally
 
 if TYPE_CHECKING:
     from procgen.checks.verdict import Check, Verdict
@@ -57,11 +57,11 @@ def verdict_text(verdict: Verdict, rows: int = 8) -> str:
 
 
 def _counts(verdict: Verdict) -> list[str]:
-    counts = ", ".join(f"{count} {what}" for what, count in sorted(verdict.counts.items()))
+    counts = tally(verdict.counts)
     about = verdict.about
-    size = f"{about['paths']:,} paths × {about['steps']:,} steps; " if "paths" in about else ""
+    size = f"{many(about['paths'], 'path')} × {many(about['steps'], 'step')}; " if "paths" in about else ""
     return [
-        f"{size}{len(verdict.rows)} checks: {counts}",
+        f"{size}{many(len(verdict.rows), 'check')}: {counts}",
         *reported(verdict),
         f"a true ensemble is called departing at most {number(verdict.false_alarm)} of the time (Holm)",
     ]
@@ -113,7 +113,7 @@ _IN_WORDS = {
     "variance over steps": "a variance off by {} at all steps",
     "autocovariance over steps": "an autocovariance off by {} at all steps",
     "slope over steps": "a slope on earlier steps off by {}",
-    "slope of squares": "a slope of squares on earlier ones off by {}",
+    "slope of squares": "a slope of squares on earlier squares off by {}",
     "mean": "a mean off by {} at one step",
     "variance": "a variance off by {} at one step",
     "covariance": "a covariance off by {} at one pair of steps",

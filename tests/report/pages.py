@@ -17,7 +17,7 @@ TIME = {"start": "2027-01-04T00:00", "every": "1h", "steps": 60, "zone": "Europe
 class Page(HTMLParser):
     """A page read strictly: tags are closed in order, ids are there once; what could load or run is collected."""
 
-    VOID = frozenset({"meta"})
+    VOID = frozenset({"meta", "wbr"})
 
     def __init__(self, text: str):
         super().__init__(convert_charrefs=True)

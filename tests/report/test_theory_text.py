@@ -109,3 +109,14 @@ def test_json_keeps_its_keys_and_has_the_new_numbers():
     assert x["forecast_variance"]["values"] == pytest.approx([9, 9 * (1 + 0.64 + 0.8**4)])
     assert w["half_life"] is None and w["unknown"]["half_life"].endswith("unit root in w.random_walk")
     assert w["forecast_variance"]["given_parts"] == pytest.approx([1, 3])
+
+
+def test_equations_stand_in_the_order_of_the_spec():
+    from procgen.report.equations import equations
+
+    product = [{"exp": {"ar": {"phi": 0.2, "sd": 0.1}, "as": "inner"}}, {"constant": 2, "as": "size"}]
+    body = [{"product": product, "as": "whole"}, {"white_noise": {"sd": 1}}, {"constant": 1}]
+    raw = {"procgen": 1, "seed": 1, "paths": 5, "time": {"steps": 9}, "series": {"x": body}}
+    lines = equations(pg.load(raw), 100)
+    labels = [line.split()[0] for line in lines if line.startswith("  ") and line[2] != " "]
+    assert labels == ["whole", "exp", "inner", "size", "white_noise", "constant"]

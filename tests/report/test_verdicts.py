@@ -51,7 +51,7 @@ def test_bar(p, level, expected):
 class Page(HTMLParser):
     """Counts tags and checks that they are closed."""
 
-    VOID = frozenset({"meta"})
+    VOID = frozenset({"meta", "wbr"})
 
     def __init__(self):
         super().__init__()
@@ -89,3 +89,30 @@ def test_page_shows_departures_first():
         text.index('<tr class="departs">') < text.index('<tr class="agrees">') < text.index('<tr class="untestable">')
     )
     assert "scenarios of a stated model" in text
+
+
+def departing(series="a_long_name_of_a_series"):
+    rows = [Check.of(series, "shocks: variance", "all steps", "spread", unit(x, 0.001, theory=1.0)) for x in (9.0, 8.0)]
+    return Verdict(rows, 0.001, {**ABOUT, "paths": 1})
+
+
+def test_text_counts_in_singular_and_plural():
+    text = departing().to_text()
+    assert "1 path × 500 steps; 2 checks: 2 depart\n" in text
+    assert "2,000 paths × 500 steps; 1 check: 1 agrees\n" in Verdict(verdict(z=(0.2,)).rows[:1], 0.001, ABOUT).to_text()
+
+
+def test_page_says_once_that_it_departs_and_lets_long_names_break():
+    head = verdict_page(departing()).partition("<body>")[2].partition("</header>")[0]
+    assert head.count("Departs from") == 1 and "DEPARTS" not in head
+    assert "1 path × 500 steps. 2 checks: 2 depart." in head
+    assert "a_<wbr>long_<wbr>name_<wbr>of_<wbr>a_<wbr>series: spread" in verdict_page(departing())
+    assert "AGREES on spread only" in verdict_page(Verdict(verdict(z=(0.2,)).rows[:1], 0.001, ABOUT))
+
+
+def test_a_drawn_parameter_and_squares_are_told_in_words():
+    law = Check.of("", "parameter pull: distribution function", "all paths", "law", unit(9.0, 0.02))
+    squares = Check.of("y", "slope of squares", "lag 1", "clustering", unit(9.0, 0.02))
+    lines = Verdict([law, squares], 0.001).headline
+    assert "(the distribution function of parameter pull is off by up to 0.18, p 1e−19)" in lines[0]
+    assert "slope of squares on earlier squares at lag 1 is " in lines[1]

@@ -81,8 +81,8 @@ def overview(subject: Subject) -> Chart:
         marks += [Line(middle, row, "seen", "seen 5 and 95 %" if i == 0 else "") for i, row in enumerate(seen)]
     each = int(np.ceil(subject.steps / BUCKETS))
     caption = (
-        f"All {subject.steps:,} steps; a point gathers {each} of them, for which bands are shown at their widest and "
-        "paths from their lowest to their highest value."
+        f"All {subject.steps:,} steps, {each} side by side drawn as one: a band as at the widest of them, a path from "
+        "its lowest to its highest value there."
     )
     y = _range(stated, seen, shown)
     pick = some(BUCKETS, 12)

@@ -214,7 +214,9 @@ class _Look:
             return f"Its own density has no closed form ({reason}){beside}."
         law, _ = self.law_or_normal()
         low, high = (float(law.ppf(p)) for p in (0.05, 0.95))
-        room = self.subject.grain / 2
+        grain, room = self.subject.grain, self.subject.grain / 2
+        if grain:  # the places of a law on a grid are computed, and hence beside it by rounding errors
+            low, high = (round(x / grain, 6) * grain + 0.0 for x in (low, high))
         inside = 100.0 * float(((known >= low - room) & (known <= high + room)).mean()) if len(known) else 0.0
         ends = f"{number(low)} and {number(high)}"
         chance = f", give or take {196 * np.sqrt(0.09 / len(known)):.1f}" if self.independent and len(known) else ""

@@ -7,7 +7,7 @@ from typing import Any
 
 from procgen.report.pictures.chart import Chart
 from procgen.report.pictures.gallery import Gallery, Section
-from procgen.report.pictures.safe import escaped, short
+from procgen.report.pictures.safe import breakable, escaped, short
 from procgen.report.pictures.svg import figure
 
 WIDTH = 92  # letters of a line of an equation
@@ -20,7 +20,7 @@ def contents(gallery: Gallery) -> Iterator[str]:
     if len(gallery.sections) >= MANY:
         yield '<nav aria-label="Series"><ul>'
         for place, section in enumerate(gallery.sections):
-            yield f'<li><a href="#series-{place}">{escaped(section.subject.name)}</a></li>'
+            yield f'<li><a href="#series-{place}">{breakable(section.subject.name)}</a></li>'
         yield "</ul></nav>"
 
 
@@ -46,15 +46,15 @@ def series(gallery: Gallery, found: dict[str, Sequence[str]]) -> Iterator[str]:
 def _heading(section: Section, found: Sequence[str]) -> Iterator[str]:
     subject = section.subject
     unit = f' <span class="unit">{escaped(subject.unit)}</span>' if subject.unit else ""
-    yield f"<h2>{escaped(subject.name)}{unit}</h2>"
+    yield f"<h2>{breakable(subject.name)}{unit}</h2>"
     note = subject.sample.spec.series[subject.name].note
     if note:
         yield f'<p class="facts">{escaped(note)}</p>'
     verdict, reasons = subject.stated.theory.stationarity
-    yield f"<p>Stated: {escaped('; '.join([verdict, *reasons]))}.</p>"
+    yield f"<p>Stated: {breakable('; '.join([verdict, *reasons]))}.</p>"
     if found:
         yield '<ul class="found">'
-        yield from (f"<li>{escaped(line)}</li>" for line in found)
+        yield from (f"<li>{breakable(line)}</li>" for line in found)
         yield "</ul>"
 
 
@@ -62,8 +62,8 @@ def figures(charts: Sequence[Chart], name: str) -> Iterator[str]:
     """Figures side by side where there is room."""
     yield '<div class="figures phone">'
     for place, chart in enumerate(charts):
-        yield f"<figure><h3>{escaped(chart.title)}</h3>{figure(chart, f'{name}-{place}')}"
-        yield f"<figcaption>{escaped(chart.caption)}</figcaption>"
+        yield f"<figure><h3>{breakable(chart.title)}</h3>{figure(chart, f'{name}-{place}')}"
+        yield f"<figcaption>{breakable(chart.caption)}</figcaption>"
         yield from _numbers(chart)
         yield "</figure>"
     yield "</div>"

@@ -58,13 +58,15 @@ footer { margin-top: 2.6rem; border-top: 3px solid var(--ink); padding-top: 1rem
 @media (max-width: 820px) { .figures { grid-template-columns: minmax(0, 1fr); } }
 @media (max-width: 600px) {
   body { padding: 1.2rem .8rem 3rem; } h1 { font-size: 1.5rem; } figure { padding: .7rem .6rem; }
+  pre { white-space: pre; overflow-x: auto; font-size: 12px; }
   dl { grid-template-columns: minmax(0, 1fr); } dd { margin-bottom: .4rem; }
   .checks thead { display: none; } .checks, .checks tbody { display: block; }
   .checks tr { display: flex; flex-wrap: wrap; gap: .05rem .8rem; padding: .5rem .6rem;
     border-bottom: 1px solid var(--line); }
   .checks tr td:nth-child(n) { border: 0; padding: 0; min-width: 0; text-align: left; background: none; }
   .checks tr.departs { background: color-mix(in srgb, var(--alarm) 9%, transparent); }
-  .checks td:first-child { font-weight: 600; } .checks td.note { flex-basis: 100%; }
+  .checks td:first-child { font-weight: 600; flex-basis: 100%; overflow-wrap: anywhere; }
+  .checks td.note { flex-basis: 100%; }
   .checks td:empty { display: none; }
   .checks td:nth-child(4)::before { content: "theory "; } .checks td:nth-child(5)::before { content: "estimate "; }
   .checks td:nth-child(6)::before { content: "std. error "; } .checks td:nth-child(7)::before { content: "p "; }

@@ -21,9 +21,9 @@ def escaped(text: object) -> str:
     return escape(visible(text), quote=True)
 
 
-def many(count: int, what: str) -> str:
-    """The count with its noun, such as 1 path or 1,000 paths."""
-    return f"{count:,} {what}{'' if count == 1 else 's'}"
+def breakable(text: object) -> str:
+    """The same for the text of HTML, where long names may go on in the next line after an underscore."""
+    return escaped(text).replace("_", "_<wbr>")
 
 
 def short(text: str, most: int) -> str:

@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from procgen.report.pictures.safe import many
+from procgen.checks.words import many
 
 LIMIT = 1 << 24  # values of all series together that are held: 134 MB
 DRAWN_LIMIT = 1 << 21  # the same for paths that are drawn for a picture only

@@ -9,6 +9,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.report.pictures.ends import FREE, Ends
 from procgen.report.pictures.seen import ENOUGH, NORMAL
 from procgen.theory.mixedseries import MixedSeries
 from procgen.theory.sources import IID
@@ -26,6 +27,7 @@ class Stated:
 
     theory: Any
     steps: int
+    ends: Ends = FREE  # of its values
 
     @property
     def still(self) -> bool:
@@ -81,7 +83,7 @@ class Stated:
         if exact is not None:
             return exact
         sd, drawn = np.sqrt(variance), np.full((len(levels), len(at)), np.nan)
-        drawn[0], drawn[-1] = mean - 2.0 * sd, mean + 2.0 * sd
+        drawn[0], drawn[-1] = np.clip([mean - 2.0 * sd, mean + 2.0 * sd], *self.ends)
         if len(levels) > 2:
             drawn[len(levels) // 2] = mean
         return drawn, TWO_SD
@@ -89,7 +91,7 @@ class Stated:
     def _by_laws(self, at: NDArray, mean: NDArray, sd: NDArray, levels: Sequence[float]) -> tuple[NDArray, str] | None:
         if self.steady:
             law = self.law(int(at[0]))
-            return None if law is None else (law.ppf(np.asarray(levels))[:, None] + (mean - mean[0]), "exact")
+            return None if law is None else (law.ppf(np.asarray(levels))[:, None] + _moved(mean), "exact")
         most = FEW_LAWS if isinstance(self.theory, MixedSeries) else MOST_LAWS
         places = np.unique(np.linspace(0, len(at) - 1, min(len(at), most)).astype(int))
         found = np.empty((len(levels), len(places)))
@@ -140,6 +142,12 @@ class Stated:
             return NORMAL * error, "from the spread between paths"
         exact = self.bartlett(lags, paths)
         return (None, "") if exact is None else (NORMAL * exact, "by Bartlett's formula")
+
+
+def _moved(mean: NDArray) -> NDArray:
+    """How far the mean is from that of the first step; nothing but rounding is nothing."""
+    moved = mean - mean[0]
+    return np.where(np.abs(moved) <= 1e-12 * np.abs(mean[0]), 0.0, moved)
 
 
 def fisher(rho: NDArray, paths: int) -> tuple[NDArray, NDArray]:

@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.checks.words import number
+from procgen.report.pictures.ends import ends
 from procgen.report.pictures.sample import Sample
 from procgen.report.pictures.seen import deviations
 from procgen.report.pictures.stated import Stated
@@ -63,12 +64,15 @@ class Subject:
 
 def subjects(sample: Sample, theory: Any) -> list[Subject]:
     """Every series of the sample."""
-    out = []
+    from procgen.terms.graph import build
+
+    out, graph = [], build(sample.spec)
     for name in sample.values:
         declared = sample.spec.series[name]
         whole = declared.decimals is not None or declared.type == "int64"
+        stated = Stated(theory[name], sample.steps, ends(graph.series[name]))
         grain = 10.0 ** -(declared.decimals or 0) if whole else 0.0
-        out.append(Subject(name, declared.unit, grain, Stated(theory[name], sample.steps), sample))
+        out.append(Subject(name, declared.unit, grain, stated, sample))
     return out
 
 
