@@ -45,7 +45,8 @@ class _Body:
         """The terms that belong to this body, in the order of the spec; sums and factors show where they are used."""
         order = [n for n in self.graph.order([self.root]) if not isinstance(n, Source)]
         shocks = {id(n.inputs[-1]) for n in order if n.term.takes_shock}
-        body = {**self.graph.spec.shared, **self.graph.spec.series}[self.owner].of
+        spec = self.graph.spec
+        body = spec.series[self.owner].of if self.owner in spec.series else spec.shared[self.owner].of
         place = {f"{self.owner}.{entry.label}": at for at, (entry, _) in reversed([*enumerate(walk(body))])}
         found = [
             n
