@@ -144,8 +144,8 @@ class _Terms:
         bodies = {}
         for p in self.kind.parameters:
             if isinstance(p.domain, Body):
-                bodies[p.name] = values.pop(p.name)
-            elif isinstance(getattr(p.domain, "each", None), Body) and isinstance(values[p.name], Mapping):
+                bodies[p.name] = values.pop(p.name, INVALID)
+            elif isinstance(getattr(p.domain, "each", None), Body) and isinstance(values.get(p.name), Mapping):
                 bodies |= {f"{p.name}.{name}": body for name, body in values[p.name].items()}
                 values[p.name] = tuple(values[p.name])
         return {name: body for name, body in bodies.items() if isinstance(body, tuple)}

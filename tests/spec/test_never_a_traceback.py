@@ -9,8 +9,10 @@ import pytest
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
+from procgen.chance import laws
 from procgen.spec.model import Spec, SpecError
 from procgen.spec.reader import read_file, read_raw, read_text
+from procgen.terms import catalogue
 from tests.spec.small import CATALOGUE, HEAD, LAWS
 from tests.spec.strategies import as_yaml, entries, specs, wild
 from tests.spec.test_spec import WHOLE
@@ -114,3 +116,14 @@ def timed(text):
     with contextlib.suppress(SpecError):
         read_text(text, CATALOGUE, LAWS)
     assert time.process_time() - begin < 10.0
+
+
+JUNK = [None, True, 3, "x", [], {}, [1], [[]], {"x": 1}, {"of": 3}, {"of": []}, {"value": 1, "per": "day"}]
+
+
+@pytest.mark.parametrize("kind", catalogue())
+def test_what_no_term_takes_is_a_fault_of_every_term(kind):
+    for junk in JUNK:
+        data = {"seed": 1, "paths": 2, "time": {"steps": 3}, "series": {"x": [{kind: junk}]}}
+        with contextlib.suppress(SpecError):
+            read_raw(data, catalogue(), laws.LAWS)
