@@ -169,11 +169,14 @@ class _Writer:
     def _owners(self, tree: Tree, steps: Steps) -> Tree:
         ways = {"series": self.declared.series, "groups": self.declared.groups, "shared": ("of",)}
         keys = ways[tree.place.path]
+        owner = tree.value.get(steps[0]) if tree.is_map and len(steps) == 1 else None
+        if owner is not None and _is_long(owner, keys, self.catalogue) and self._is_body():
+            steps = (*steps, "of")  # its unit and its like stay
         return self._key(tree, steps, lambda name: lambda t, s: self._owner(t, s, keys))
 
     def _owner(self, tree: Tree, steps: Steps, keys: tuple[str, ...]) -> Tree:
         """A series, a group or a shared body, in its short or its long form."""
-        long = tree.is_map and not any(k in self.catalogue for k in tree.value) and any(k in keys for k in tree.value)
+        long = _is_long(tree, keys, self.catalogue)
         if steps[0] in keys and steps[0] != "of":
             form = tree if long else Tree({"of": tree}, tree.place, {"of": Tree("of", tree.place)})
             return self._key(form, steps, lambda name: self._plain, keys)
@@ -206,6 +209,11 @@ class _Writer:
         if not full:
             return self._new(tree.place.path)
         return self._body(tree, full) if way else self._entry(tree, full)
+
+    def _is_body(self) -> bool:
+        """Whether what is put is a body, terms alone, and not a series with its attributes, or nothing."""
+        new = self.new
+        return new.is_list or (new.is_map and any(k in self.catalogue for k in new.value))
 
     def _is_value(self) -> bool:
         """Whether what is put at a label is what the term says, and not a whole entry, or nothing."""
@@ -289,6 +297,11 @@ class _Writer:
             return self._key(tree, steps, lambda name: self._plain, names)
 
         return way
+
+
+def _is_long(tree: Tree, keys: Sequence[str], catalogue: Mapping[str, Any]) -> bool:
+    """Whether a series, a group or a shared body is written with its attributes and `of`."""
+    return tree.is_map and not any(k in catalogue for k in tree.value) and any(k in keys for k in tree.value)
 
 
 def _long(tree: Tree) -> bool:

@@ -193,14 +193,17 @@ def variant(spec: Spec, name: str) -> Spec:
 def settled(spec: Spec, settings: Iterable[Setting]) -> Spec:
     """Return the spec with other things at some places, checked anew; SpecError lists every fault."""
     written = _written(spec)
-    kinds = written.catalogue
-    declared = Declared(kinds, _SETTABLE, _names(TIME), _names(SERIES), (*_names(SERIES), *OWN))
     faults: list[Fault] = []
-    tree = applied(written.tree, settings, declared, faults)
-    made = _checked(tree, faults, kinds, written.laws, spec.file)
+    tree = applied(written.tree, settings, settable(written.catalogue), faults)
+    made = _checked(tree, faults, written.catalogue, written.laws, spec.file)
     if faults or made is None:
         raise _error(faults)
     return made
+
+
+def settable(catalogue: Mapping[str, Any]) -> Declared:
+    """Return which keys a spec can have where, for places in it."""
+    return Declared(catalogue, _SETTABLE, _names(TIME), _names(SERIES), (*_names(SERIES), *OWN))
 
 
 def _names(parameters: Iterable[Parameter]) -> tuple[str, ...]:

@@ -1,18 +1,30 @@
 """Variants and settings: places found, values checked as in the file, digests and shocks left alone."""
 
 import json
+from collections import Counter
+from pathlib import Path
 
 import numpy as np
 import pytest
+from hypothesis import HealthCheck, given, settings
+from hypothesis import strategies as st
 from jsonschema import Draft202012Validator
 from typer.testing import CliRunner
 
 import procgen as pg
+from procgen.chance.laws import LAWS
 from procgen.cli import app
 from procgen.report.schema import schema
-from procgen.spec.places import Nowhere, plain_at, steps_of
+from procgen.spec.places import Nowhere, plain_at, put, steps_of
+from procgen.spec.reader import settable
+from procgen.spec.tree import from_data
 from procgen.spec.variants import all_settings
 from procgen.spec.yaml12 import from_text
+from procgen.terms import catalogue
+from tests.spec.strategies import wild
+
+WILD = wild(catalogue(), LAWS)
+GALLERY = sorted((Path(__file__).parents[2] / "specs").glob("*.yaml"))
 
 SPEC = """procgen: 1
 seed: 11
@@ -108,6 +120,10 @@ def test_a_whole_term_and_a_whole_list_can_be_put_and_nothing_takes_out(spec):
     swapped = spec.set({"shared.wind.ar.total_sd": None, "shared.wind.ar.sd": 0.4})
     assert swapped.shared["wind"].of[0].values["sd"] == 0.4
     assert spec.set({"correlation": None}).correlation.names == ()
+    body = spec.set({"series.load": [{"white_noise": {"sd": 1}, "as": "swing"}]}).series["load"]
+    assert (body.unit, [entry.kind for entry in body.of]) == ("kW", ["white_noise"])
+    whole = spec.set({"series.load": {"of": {"white_noise": {"sd": 1}, "as": "swing"}, "unit": "MW"}}).series["load"]
+    assert whole.unit == "MW"
 
 
 def test_a_variant_is_the_spec_with_its_settings_and_the_spec_is_left_as_it_was(tmp_path, spec):
@@ -286,3 +302,44 @@ def test_the_schema_knows_variants():
     assert judge.is_valid(raw)
     assert not judge.is_valid({**raw, "variants": {}}) and not judge.is_valid({**raw, "variants": {"a": {}}})
     assert not judge.is_valid({**raw, "variants": {"a b": {"seed": 1}}})
+
+
+# every place of the gallery
+
+
+def places(tree):
+    """Every place in a tree as faults print it, with what stands there."""
+    inner = tree.value.values() if tree.is_map else tree.value if tree.is_list else ()
+    for one in inner:
+        if one.place.path and not one.place.path.startswith(("reuse", "variants", "procgen")):
+            yield one.place.path, one.plain()
+            yield from places(one)
+
+
+@pytest.mark.parametrize("file", GALLERY, ids=lambda file: file.stem)
+def test_every_place_of_the_gallery_can_be_put_and_what_stands_there_changes_nothing(file):
+    spec = pg.load(file)
+    tree = spec.written.tree
+    found = list(places(tree))
+    twice = Counter(path for path, _ in found)  # `of` is left out: a series and its body are one place
+    kept = {path: value for path, value in found if value is not None and '["' not in path and twice[path] == 1}
+    assert len(kept) > 5
+    declared = settable(spec.written.catalogue)
+    for path, value in kept.items():
+        other, where = put(tree, path, from_data(value, None, []), declared)
+        assert (other.plain(), where) == (tree.plain(), path)
+
+
+@settings(max_examples=150, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
+@given(st.data())
+def test_whatever_is_set_it_is_a_spec_or_a_spec_error(data):
+    spec = pg.load(from_text(SPEC, None, []).plain())
+    known = sorted(dict(places(spec.written.tree)))
+    place = data.draw(st.sampled_from(known) | st.text(max_size=20))
+    cut = data.draw(st.integers(0, len(place)))
+    more = data.draw(st.sampled_from(["", "", ".", "[0]", "[9]", "x", ".of", ".value", ".ar.phi"]))
+    mangled = place[:cut] + more + place[cut:]
+    try:
+        assert isinstance(spec.set({mangled: data.draw(WILD)}), pg.Spec)
+    except pg.SpecError as error:
+        assert str(error)
