@@ -189,6 +189,10 @@ class Term:
         """For each of ``watched`` whether it has happened, and its chance given the past: NaN where none was taken."""
         return ()
 
+    def shown(self, output: str) -> Any:
+        """What answers for a hidden output to ``unranked``, ``rank`` and ``events``, as a term would; None: nothing."""
+        return None
+
     def ahead(self, steps: Array, state: State, *inputs: Ahead) -> Ahead | Unknown:
         """Mean and variance at the coming `steps`, given the state just before the first of them."""
         return Unknown(f"{self.kind} has no closed forecast")

@@ -25,6 +25,7 @@ from procgen.spec.declare import (
 from procgen.spec.named import Named, Names, Rows
 from procgen.spec.tree import Tree
 from procgen.terms.base import Ahead, Array, Draw, Issue, State, Term, number
+from procgen.terms.followed import Seen
 
 UNIFORM = LAWS["uniform"]()
 ROOT_12 = 3.4641016151377544
@@ -304,6 +305,12 @@ class States:
             rows.append(np.stack(self.whole(now)))
         return np.stack(rows, axis=1)
 
+    @property
+    def stays(self) -> list[float]:
+        """Mean steps spent in each state at a go."""
+        with np.errstate(divide="ignore"):
+            return self.whole(1.0 / (1.0 - np.diagonal(self.p)))
+
     def says(self) -> str:
         """Transitions, shares and mean durations in words."""
         parts = []
@@ -313,16 +320,14 @@ class States:
         if self.shares is not None:
             shares = zip(self.names, self.whole(self.shares), strict=True)
             parts.append(f"shares {', '.join(f'{name} {number(share)}' for name, share in shares)}")
-        with np.errstate(divide="ignore"):
-            means = self.whole(1.0 / (1.0 - np.diagonal(self.p)))
         stays = []
-        for k, (name, mean) in enumerate(zip(self.names, means, strict=True)):
+        for k, (name, mean) in enumerate(zip(self.names, self.stays, strict=True)):
             stages = self.owners.count(k)
             stays.append(f"{name} {number(mean)}" + (f" in {stages} stages" if stages > 1 else ""))
         return ",  ".join([*parts, f"mean stays {', '.join(stays)}"])
 
 
-class Chain(Term):
+class Chain(Seen, Term):
     kind = "chain"
     family = "regimes"
     purpose = "the number (0, 1, …) of the state that a Markov chain is in; for `regimes` that follow one chain"

@@ -6,11 +6,13 @@ a uniform v of its own (Rosenblatt 1952; Brockwell 2007): whatever the law, it c
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
 
 from procgen.terms.base import Array, Node, Term, Unknown
+from procgen.terms.combine import Hidden
 from procgen.terms.graph import Graph, Source
 from procgen.terms.recover import KnownParts, sources_below
 
@@ -26,6 +28,7 @@ def ranking(graph: Graph, series: str, whole: bool, grain: float) -> Ranking | U
     node: Any = graph.series[series]
     chain: list[tuple[Node, int]] = []
     while not isinstance(node, Source):
+        node = _shown(node)
         if not node.term.unranked():
             hidden = [part for part in node.inputs if not isinstance(part, Source) and sources_below(graph, part)]
             if hidden:
@@ -37,6 +40,12 @@ def ranking(graph: Graph, series: str, whole: bool, grain: float) -> Ranking | U
         chain.append((node, random[0]))
         node = node.inputs[random[0]]
     return None
+
+
+def _shown(node: Node) -> Node:
+    """A node as it is, or what the term behind a hidden output has to say of it."""
+    term = node.inputs[0].term.shown(node.term.output) if isinstance(node.term, Hidden) else None
+    return node if term is None else replace(node, term=term, inputs=())
 
 
 class Ranking:

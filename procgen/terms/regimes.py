@@ -12,6 +12,7 @@ from procgen.terms import markov
 from procgen.terms.base import Ahead, Draw, Term, Unknown
 from procgen.terms.combine import Hidden
 from procgen.terms.flag import Flag
+from procgen.terms.followed import Shown
 
 
 class Regimes(Term):
@@ -100,6 +101,9 @@ class Regimes(Term):
         for number, rows in enumerate(branches[1:], start=1):
             shown = np.where(states == number, rows, shown)
         return {"": shown, "regime": states}
+
+    def shown(self, output):
+        return Shown(self.chain) if output == "regime" and self.chain is not None else None
 
     def ahead(self, steps, state, *inputs):
         if self.chain is None:

@@ -10,6 +10,7 @@ from procgen.spec.declare import Parameter, Real
 from procgen.spec.named import Named
 from procgen.terms import markov
 from procgen.terms.base import LAW, Ahead, Draw, Term, number
+from procgen.terms.followed import Shown
 
 
 class SwitchingNoise(Term):
@@ -69,6 +70,9 @@ class SwitchingNoise(Term):
     def recurse(self, inputs, state, at):
         states, state = self.chain.go(inputs[1], state)
         return self._values(inputs[0], states), state
+
+    def shown(self, output):
+        return Shown(self.chain) if output == "regime" else None
 
     def ahead(self, steps, state, *inputs):
         chances = self.chain.chances(len(steps), state)

@@ -13,6 +13,7 @@ from procgen.spec.named import Named
 from procgen.terms import markov
 from procgen.terms.base import LAW, Ahead, Draw, Term, number, signed, without_gap
 from procgen.terms.conditional import BURN_TILE, FORGOTTEN
+from procgen.terms.followed import Shown
 from procgen.terms.start import companion, decay_length
 
 MOST = 100  # states times stages
@@ -210,6 +211,9 @@ class SwitchingGarch(Term):
         with np.errstate(invalid="ignore", divide="ignore"):
             chances = np.where((total > 0.0)[:, None, :], joint / total[:, None, :], seen)
         return np.einsum("ijp,jl->ilp", chances, self.chain.p)
+
+    def shown(self, output):
+        return Shown(self.chain) if output == "regime" else None
 
     def ahead(self, steps, state, *inputs):
         omega, alpha, beta = (row[:, None] for row in self.weights)
