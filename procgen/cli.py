@@ -9,6 +9,7 @@ import typer
 
 from procgen.console import guarded, printed, progress, run, said
 from procgen.difference_command import HELP, difference
+from procgen.export_command import EXAMPLES, Columns, export
 from procgen.options import (
     Expect,
     Settings,
@@ -53,22 +54,10 @@ def common(
     pass
 
 
-def roles_of(text: str) -> dict[str, str]:
-    """Roles of columns and their names from `id=shop,time=week`."""
-    pairs = [part.partition("=") for part in text.split(",")]
-    if not all(role.strip() and name.strip() for role, _, name in pairs):
-        raise typer.BadParameter(f"expected ROLE=NAME, such as id=shop,time=week, got {text!r}")
-    return {role.strip(): name.strip() for role, _, name in pairs}
-
-
 SpecFile = Annotated[Path, typer.Argument(metavar="SPEC", help="The spec, a YAML file.", show_default=False)]
 Scheduler = Annotated[
     str | None,
     typer.Option(metavar="local|ADDRESS", help="Work on a Dask cluster: the one there, or one started here."),
-]
-Columns = Annotated[
-    dict | None,
-    typer.Option(parser=roles_of, metavar="id=NAME,…", help="Other names for id, path, step, time and value."),
 ]
 Json = Annotated[bool, typer.Option("--json", help="Print JSON instead of text.")]
 
@@ -181,6 +170,9 @@ def render(
         printed(f"all have the same shocks: procgen difference {within(out, 'base')} {last} tells what differs")
     if wanted is not None:
         raise typer.Exit(as_expected(out, wanted))
+
+
+app.command("export", short_help="Write an ensemble as one file for another tool.", epilog=EXAMPLES)(export)
 
 
 @app.command(

@@ -57,7 +57,7 @@ def rendered(tmp_path) -> Path:
 
 def test_help_names_every_command_and_shows_an_example_of_each():
     text = Result("-h").out
-    for name in ("render", "validate", "picture", "theory", "terms", "schema", "digest", "difference"):
+    for name in ("render", "export", "validate", "picture", "theory", "terms", "schema", "digest", "difference"):
         assert f"  {name} " in text
         page = Result(name, "--help").out
         assert f"procgen {name}" in page.partition("Example")[2]
@@ -67,11 +67,12 @@ def test_help_names_every_command_and_shows_an_example_of_each():
 def test_the_options_are_those_that_were_promised():
     promised = {
         "render": "-o --paths --first-path --steps --seed --workers --layout --reveal --resume --overwrite --scheduler "
-        "--variant --set --start --expect",
+        "--columns --partition --variant --set --start --expect",
         "validate": "--spec --path-col --step-col --time-col --series-col --false-alarm --json --report --scheduler",
         "theory": "--json --at --lags --frequencies --horizon --variant --set --start",
         "picture": "-o --variant --set --start",
         "digest": "--expect --redraw",
+        "export": "-o --layout --series --paths --steps --decimals --local-time --columns --overwrite",
         "difference": "--variant --at --json",
     }
     for name, options in promised.items():
@@ -129,6 +130,33 @@ def test_reveal_writes_terms_beside_the_series(tmp_path):
     options = ["--reveal", "flow.ar", *SMALL]
     assert Result("render", PUMP, "-o", str(tmp_path / "out"), *options).code == 0
     assert "flow.ar" in pg.open_ensemble(tmp_path / "out").names
+
+
+def test_export_says_what_it_writes_and_takes_numbers_of_paths(tmp_path, rendered):
+    file = tmp_path / "flow.csv"
+    options = ["--paths", "3-5", "--steps", "7", "--layout", "panel", "--columns", "id=pump,value=litres"]
+    done = Result("export", str(rendered), "-o", str(file), *options)
+    assert done.code == 0 and done.err == ""
+    assert done.out.splitlines()[0] == f"{file}: 3 rows, 4 columns (pump, path, time, litres) of flow"
+    assert done.out.splitlines()[-1].startswith("written, ")
+    found = pd.read_csv(file)
+    assert list(found["path"]) == [3, 4, 5]
+    assert np.allclose(found["litres"], pg.open_ensemble(rendered)["flow"][3:6, 7], rtol=1e-15)
+    again = Result("export", str(rendered), "-o", str(file), *options)
+    assert again.code == 2 and "is there already; choose another name, or replace it with --overwrite" in again.err
+    assert Result("export", str(rendered), "-o", str(file), *options, "--overwrite").code == 0
+    for wrong in (["--paths", "5-3"], ["--columns", "pump"], ["--layout", "cube"]):
+        assert Result("export", str(rendered), "-o", str(tmp_path / "no.csv"), *wrong).code == 2
+
+
+def test_render_writes_other_layouts(tmp_path):
+    out = str(tmp_path / "out")
+    options = ["--layout", "panel", "--columns", "id=pump", "--partition", "series"]
+    done = Result("render", PUMP, "-o", out, *SMALL, *options)
+    assert done.code == 0
+    assert "layout panel (pump, path, time, value): a row an observation; a file a series" in done.out
+    assert Result("digest", out, "--redraw").code == 0
+    assert Result("render", PUMP, "-o", out, *SMALL).code == 2
 
 
 def test_theory_prints_equations_and_moments_and_the_same_as_json():

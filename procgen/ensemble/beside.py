@@ -106,7 +106,11 @@ class Redrawn(Ensemble):
         return self._spec
 
     def stored(
-        self, first_path: int | None = None, end_path: int | None = None, names: Sequence[str] | None = None
+        self,
+        first_path: int | None = None,
+        end_path: int | None = None,
+        names: Sequence[str] | None = None,
+        steps: range | None = None,
     ) -> Blocks:
         first = self.whole.first_path if first_path is None else first_path
         end = self.whole.end_path if end_path is None else end_path

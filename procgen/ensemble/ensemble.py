@@ -17,6 +17,7 @@ from procgen.ensemble.layouts import Layout
 from procgen.ensemble.manifest import Manifest, bytes_text
 from procgen.ensemble.plan import GROUP_ROWS, Block, cut
 from procgen.ensemble.seal import contradictions, refuse_changed, refuse_version
+from procgen.ensemble.shapes import Shapes
 from procgen.ensemble.source import read_spec
 from procgen.ensemble.store import MANIFEST, PLAN, Folder, folder_path
 from procgen.terms.varied import Varied
@@ -28,7 +29,15 @@ if TYPE_CHECKING:
 Blocks = Iterator[tuple[Block, dict[str, np.ndarray]]]
 
 
-class Ensemble:
+def put(out: Mapping[str, np.ndarray], block: Block, values: Mapping[str, np.ndarray], here: Block) -> None:
+    """Copy what rectangle `here` has of `block` to its place in `out`, arrays (paths, steps) by name."""
+    common = block.common(here)
+    if common is not None:
+        for name, array in out.items():
+            array[common.within(block)] = values[name][common.within(here)]
+
+
+class Ensemble(Shapes):
     """All paths of a spec, or a range of them.
 
     ``ens["load_kw"]`` is a (paths, steps) float64 array in the series' unit. `names` lists the columns:
@@ -39,7 +48,7 @@ class Ensemble:
     def __init__(self, columns: Sequence[Column], whole: Block, stamps: Any = None):
         self.columns = tuple(columns)
         self.whole = whole
-        self._stamps = stamps
+        self.stamps = stamps
 
     # what is here
 
@@ -58,11 +67,16 @@ class Ensemble:
         raise NotImplementedError
 
     def stored(
-        self, first_path: int | None = None, end_path: int | None = None, names: Sequence[str] | None = None
+        self,
+        first_path: int | None = None,
+        end_path: int | None = None,
+        names: Sequence[str] | None = None,
+        steps: range | None = None,
     ) -> Blocks:
-        """Blocks in row order with values as stored, of the paths first_path … end_path − 1.
+        """Blocks part by part, in row order within each, with values as stored, of the paths first_path … end_path − 1.
 
-        Blocks at the ends of the range may reach beyond it. `names` are the columns wanted, all when None.
+        Blocks at the ends of the ranges may reach beyond them. `names` are the columns wanted, all when None; parts
+        without any of `steps` are left out.
         """
         raise NotImplementedError
 
@@ -77,9 +91,9 @@ class Ensemble:
 
     def times(self) -> np.ndarray | None:
         """The stamps of the steps as datetime64[us] in UTC, or None when the spec has no start."""
-        if self._stamps is None:
+        if self.stamps is None:
             return None
-        return np.asarray(self._stamps(self.whole.first_step, self.whole.steps)).astype("datetime64[us]")
+        return np.asarray(self.stamps(self.whole.first_step, self.whole.steps)).astype("datetime64[us]")
 
     # values
 
@@ -88,9 +102,8 @@ class Ensemble:
 
     def __getitem__(self, name: str) -> np.ndarray:
         """All values of a column, (paths, steps) float64; KeyError names the columns there are."""
-        if name not in self.names:
-            raise KeyError(f"expected one of {', '.join(self.names)}, got {name!r}")
-        return self._gather((name,), self.whole.first_path, self.whole.end_path)[name]
+        self.refuse_unknown(name)
+        return as_float(self.rectangle(self.whole, (name,))[name])
 
     def paths(self, first: int, end: int) -> Memory:
         """The paths first … end − 1, by their numbers in the ensemble, as an ensemble in memory.
@@ -103,18 +116,29 @@ class Ensemble:
                 f"included), got {first} to {end}"
             )
         whole = Block(first, end - first, self.whole.first_step, self.whole.steps)
-        return Memory(self._gather(self.names, first, end, stored=True), self.columns, whole, self._stamps, self)
+        return Memory(self.rectangle(whole), self.columns, whole, self.stamps, self)
 
-    def _gather(self, names: Sequence[str], first: int, end: int, stored: bool = False) -> dict[str, np.ndarray]:
-        types = {c.name: np.dtype(c.type if stored else np.float64) for c in self.columns if c.name in names}
-        out = {name: np.empty((end - first, self.whole.steps), kind) for name, kind in types.items()}
-        for block, values in self.stored(first, end, names):
-            a, b = max(block.first_path, first), min(block.end_path, end)
-            steps = slice(block.first_step - self.whole.first_step, block.end_step - self.whole.first_step)
-            for name in out:
-                rows = values[name][a - block.first_path : b - block.first_path]
-                out[name][a - first : b - first, steps] = rows
+    def refuse_unknown(self, name: str) -> None:
+        if name not in self.names:
+            raise KeyError(f"expected one of {', '.join(self.names)}, got {name!r}")
+
+    def rectangle(self, block: Block, names: Sequence[str] | None = None) -> dict[str, np.ndarray]:
+        """Values (paths, steps) of a rectangle as they are stored, by column: those of these names, or all."""
+        columns = [column for column in self.columns if names is None or column.name in names]
+        out = {column.name: np.empty((block.paths, block.steps), column.type) for column in columns}
+        steps = range(block.first_step, block.end_step)
+        for here, values in self.stored(block.first_path, block.end_path, [*out], steps):
+            put(out, block, values, here)
         return out
+
+    def ranges(self) -> list[range]:
+        """Ranges of paths that are stored together, in order."""
+        return [range(self.whole.first_path, self.whole.end_path)]
+
+    @property
+    def cut_by_steps(self) -> bool:
+        """Whether paths are cut into parts, so that blocks of a path do not follow each other."""
+        return False
 
     @property
     def parameters(self) -> pd.DataFrame:
@@ -138,7 +162,7 @@ class Ensemble:
         """A table of the long layout: path, step, time (where the spec has a start), then the columns."""
         import pyarrow as pa
 
-        rows = form(Layout(), self.columns, self._stamps, self.whole)
+        rows = form(Layout(), self.columns, self.stamps, self.whole)
         return pa.concat_tables([rows.table(block, self.columns, values) for block, values in self.stored()])
 
     def to_pandas(self) -> pd.DataFrame:
@@ -178,15 +202,17 @@ class Memory(Ensemble):
         return digest.total(roots)
 
     def stored(
-        self, first_path: int | None = None, end_path: int | None = None, names: Sequence[str] | None = None
+        self,
+        first_path: int | None = None,
+        end_path: int | None = None,
+        names: Sequence[str] | None = None,
+        steps: range | None = None,
     ) -> Blocks:
         first = self.whole.first_path if first_path is None else first_path
         end = self.whole.end_path if end_path is None else end_path
         wanted = Block(first, end - first, self.whole.first_step, self.whole.steps)
         for block in cut(wanted, GROUP_ROWS):
-            rows = slice(block.first_path - self.whole.first_path, block.end_path - self.whole.first_path)
-            steps = slice(block.first_step - self.whole.first_step, block.end_step - self.whole.first_step)
-            yield block, {name: values[rows, steps] for name, values in self._values.items()}
+            yield block, {name: values[block.within(self.whole)] for name, values in self._values.items()}
 
 
 class OnDisk(Ensemble):
@@ -196,7 +222,7 @@ class OnDisk(Ensemble):
         self.path, self.manifest = path, manifest
         self._spec = spec
         super().__init__(manifest.columns, manifest.whole)
-        self._stamps = self.spec.time.stamps if manifest.time is not None else None
+        self.stamps = self.spec.time.stamps if manifest.time is not None else None
 
     @property
     def spec(self) -> Any:
@@ -210,14 +236,28 @@ class OnDisk(Ensemble):
     def digest(self) -> str:
         return self.manifest.digest
 
+    def ranges(self) -> list[range]:
+        found = dict.fromkeys((part.block.first_path, part.block.end_path) for part in self.manifest.parts)
+        return [range(*ends) for ends in found]
+
+    @property
+    def cut_by_steps(self) -> bool:
+        return any(part.block.steps != self.whole.steps for part in self.manifest.parts)
+
     def stored(
-        self, first_path: int | None = None, end_path: int | None = None, names: Sequence[str] | None = None
+        self,
+        first_path: int | None = None,
+        end_path: int | None = None,
+        names: Sequence[str] | None = None,
+        steps: range | None = None,
     ) -> Blocks:
         first = self.whole.first_path if first_path is None else first_path
         end = self.whole.end_path if end_path is None else end_path
-        stamps, layout = self._stamps, self.manifest.layout
+        stamps, layout = self.stamps, self.manifest.layout
+        steps = range(self.whole.end_step) if steps is None else steps
         for part in self.manifest.parts:
-            if part.block.end_path > first and part.block.first_path < end:
+            inside = part.block.end_path > first and part.block.first_path < end
+            if inside and part.block.end_step > steps.start and part.block.first_step < steps.stop:
                 yield from parquet.read(
                     self.path, part.file, part.block, layout, self.columns, stamps, first, end, names
                 )

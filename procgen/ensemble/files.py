@@ -7,13 +7,14 @@ import os
 import tempfile
 from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import asdict
+from pathlib import Path
 from typing import Any, Protocol
 
 import numpy as np
 
 from procgen.ensemble import parquet
 from procgen.ensemble.columns import TYPES, Column
-from procgen.ensemble.errors import EnsembleError
+from procgen.ensemble.errors import EnsembleError, system_sentence
 from procgen.ensemble.forms import form
 from procgen.ensemble.layouts import Layout
 from procgen.ensemble.parquet import PartWriter
@@ -59,8 +60,8 @@ def writing(
 class Gathered:
     """All values of a part: in memory, or in a file without a name where the part is larger than most."""
 
-    def __init__(self, part: Block, columns: Sequence[Column], scratch: Any = None):
-        self.part, self.columns, self.scratch = part, columns, scratch
+    def __init__(self, part: Block, columns: Sequence[Column], room: Any = None):
+        self.part, self.columns, self.room = part, columns, room
         self.values: dict[str, np.ndarray] = {}
         self.nodes: dict[str, Any] = {}
 
@@ -70,18 +71,16 @@ class Gathered:
             return
         if not self.values:
             self.values = self._arrays()
-        rows = slice(batch.first_path - self.part.first_path, batch.end_path - self.part.first_path)
-        steps = slice(batch.first_step - self.part.first_step, batch.end_step - self.part.first_step)
         for name, array in self.values.items():
-            array[rows, steps] = values[name]
+            array[batch.within(self.part)] = values[name]
 
     def _arrays(self) -> dict[str, np.ndarray]:
         shape, found, offset = (self.part.paths, self.part.steps), {}, 0
         for column in self.columns:
-            if self.scratch is None:
+            if self.room is None:
                 found[column.name] = np.empty(shape, column.type)
             else:
-                found[column.name] = np.memmap(self.scratch, column.type, "r+", offset, shape)
+                found[column.name] = np.memmap(self.room, column.type, "r+", offset, shape)
                 offset += self.part.rows * TYPES[column.type]
         return found
 
@@ -89,12 +88,26 @@ class Gathered:
 @contextlib.contextmanager
 def _gathered(folder: Folder, part: Block, columns: Sequence[Column]) -> Iterator[Gathered]:
     size = part.rows * sum(TYPES[column.type] for column in columns)
-    if size <= 2 * PART_BYTES or not hasattr(os, "posix_fallocate"):
+    if size <= 2 * PART_BYTES:
         yield Gathered(part, columns)
         return
-    with folder.explained(f"writing {folder.state}"), tempfile.TemporaryFile(dir=folder.state) as scratch:
-        os.posix_fallocate(scratch.fileno(), 0, size)  # a full disk is said here; a map could only crash
-        yield Gathered(part, columns, scratch)
+    with scratch(folder.state, size) as file:
+        yield Gathered(part, columns, file)
+
+
+@contextlib.contextmanager
+def scratch(folder: Path, size: int) -> Iterator[Any]:
+    """An open file of that size in a folder, without a name, which is gone when it is closed."""
+    with contextlib.ExitStack() as stack:
+        try:
+            file = stack.enter_context(tempfile.TemporaryFile(dir=folder))
+            if hasattr(os, "posix_fallocate"):  # a full disk is said here; writing into a map could only crash
+                os.posix_fallocate(file.fileno(), 0, size)
+            else:
+                file.truncate(size)
+        except OSError as error:
+            raise EnsembleError(system_sentence(error, f"making room in {folder}")) from None
+        yield file
 
 
 def _of(nodes: Mapping[str, Mapping[str, str]], columns: Sequence[Column]) -> dict[str, dict[str, str]]:

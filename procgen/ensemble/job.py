@@ -100,7 +100,8 @@ def render(
         raise EnsembleError(f"expected at most {MOST} paths and steps, got {whole}")
     if out is None:
         return _in_memory(source, whole, progress)
-    asked.check(source.columns, source.stamps is not None, whole.file(whole))
+    asked.check(source.columns, source.stamps is not None)
+    asked.check_files(whole.file(whole), source.columns)
     job = Job(spec, source, whole, Folder(folder), names, asked, factory)
     if workers is None and scheduler is None:
         workers = engines.default_workers(whole.rows * len(source.columns))

@@ -110,7 +110,7 @@ class Layout:
         held = [(column,) for column in columns] if self.kind == "wide" else owned(columns)
         return {f"{some[0].name}.{part}": some for some in held}
 
-    def check(self, columns: Sequence[Column], stamped: bool, part: str) -> None:
+    def check(self, columns: Sequence[Column], stamped: bool) -> None:
         """EnsembleError when an ensemble of these columns cannot have this layout."""
         if "time" in self.renamed and not stamped and self.kind != "panel":
             raise EnsembleError(
@@ -130,11 +130,11 @@ class Layout:
                     f"{count} columns of layout {self.kind} would be called {name!r}; give one another name with "
                     f"columns (--columns), whose roles are {', '.join(ROLES[self.kind])}"
                 )
-        self._check_files([*self.files(part, columns)])
 
-    def _check_files(self, files: list[str]) -> None:
+    def check_files(self, part: str, columns: Sequence[Column]) -> None:
+        """EnsembleError when a part of that name cannot have its files in one folder."""
         seen: dict[str, str] = {}
-        for name in files:
+        for name in self.files(part, columns):
             if len(name.encode()) > LONGEST:
                 raise EnsembleError(f"the file name {name} is too long; use partition paths, or reveal shorter names")
             if seen.setdefault(name.casefold(), name) != name:

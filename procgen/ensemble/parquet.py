@@ -72,9 +72,7 @@ class PartWriter:
 
     def page(self, group: Block, unit: Unit, batch: Block, values: Mapping[str, np.ndarray]) -> None:
         """Add a unit of the rectangle `group` as one row group, from values of `batch`."""
-        rows = slice(group.first_path - batch.first_path, group.end_path - batch.first_path)
-        steps = slice(group.first_step - batch.first_step, group.end_step - batch.first_step)
-        inside = {column.name: values[column.name][rows, steps] for column in unit}
+        inside = {column.name: values[column.name][group.within(batch)] for column in unit}
         rowgroup = self.form.table(group, unit, inside)
         self._file.write_table(rowgroup, row_group_size=max(rowgroup.num_rows, 1))
 

@@ -44,6 +44,17 @@ class Block:
     def end_step(self) -> int:
         return self.first_step + self.steps
 
+    def common(self, other: Block) -> Block | None:
+        """The rectangle that is in both, None when there is none."""
+        path, end_path = max(self.first_path, other.first_path), min(self.end_path, other.end_path)
+        step, end_step = max(self.first_step, other.first_step), min(self.end_step, other.end_step)
+        return Block(path, end_path - path, step, end_step - step) if path < end_path and step < end_step else None
+
+    def within(self, other: Block) -> tuple[slice, slice]:
+        """Where this rectangle is in an array (paths, steps) of the other."""
+        path, step = self.first_path - other.first_path, self.first_step - other.first_step
+        return slice(path, path + self.paths), slice(step, step + self.steps)
+
     def file(self, whole: Block) -> str:
         """The part's file name; steps are named only where they are not all of `whole`."""
         name = f"paths-{self.first_path:09d}-{self.end_path - 1:09d}"

@@ -35,6 +35,15 @@ def folder_path(value: Any, name: str) -> Path:
     return Path(value)
 
 
+def named_path(value: Any) -> Path:
+    """The path of a file to write; TypeError for what is no path, EnsembleError for an empty one."""
+    if not isinstance(value, str | os.PathLike):
+        raise TypeError(f"expected path to be the path of a file, got {type(value).__name__}")
+    if not os.fspath(value):
+        raise EnsembleError("expected path to be the path of a file, got an empty text; give one, such as values.csv")
+    return Path(value)
+
+
 class Folder:
     """The files of one ensemble; errors of the operating system become sentences."""
 
@@ -90,14 +99,6 @@ class Folder:
         """Bytes of several files, -1 when one of them is not there."""
         found = [self.size(name) for name in names]
         return -1 if -1 in found else sum(found)
-
-    @contextlib.contextmanager
-    def explained(self, doing: str) -> Iterator[None]:
-        """What the operating system refuses, as a sentence."""
-        try:
-            yield
-        except OSError as error:
-            raise EnsembleError(system_sentence(error, doing)) from None
 
     def save_state(self, name: str, state: Mapping[str, np.ndarray]) -> None:
         """Keep the carried state at the end of part `name`."""

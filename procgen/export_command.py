@@ -1,0 +1,104 @@
+"""The command `export`: an ensemble as one file for another tool."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Annotated
+
+import typer
+
+from procgen.console import guarded, printed, progress
+
+EXAMPLES = (
+    "\b\nExamples:\n  procgen export build/pump-flow -o flow.csv --paths 0-9\n"
+    "  procgen export build/pump-flow -o flow.xlsx --layout panel --local-time --decimals 1\n"
+    "  procgen export build/pump-flow -o flow.npy --series flow"
+)
+
+
+def roles_of(text: str) -> dict[str, str]:
+    """Roles of columns and their names from `id=shop,time=week`."""
+    pairs = [part.partition("=") for part in text.split(",")]
+    if not all(role.strip() and name.strip() for role, _, name in pairs):
+        raise typer.BadParameter(f"expected ROLE=NAME, such as id=shop,time=week, got {text!r}")
+    return {role.strip(): name.strip() for role, _, name in pairs}
+
+
+def numbers_of(text: str) -> range:
+    """Numbers of paths or steps from `0-99`, both included, or `7`."""
+    first, _, last = (part.strip() for part in text.partition("-"))
+    last = last if "-" in text else first
+    if not (first.isdecimal() and last.isdecimal() and max(len(first), len(last)) <= 15 and int(first) <= int(last)):
+        raise typer.BadParameter(f"expected numbers from 0 on, such as 0-99 or 7, got {text!r}")
+    return range(int(first), int(last) + 1)
+
+
+Columns = Annotated[
+    dict | None,
+    typer.Option(parser=roles_of, metavar="id=NAME,…", help="Other names for id, path, step, time and value."),
+]
+
+
+@guarded
+def export(
+    source: Annotated[Path, typer.Argument(metavar="OUT", help="A rendered ensemble.", show_default=False)],
+    out: Annotated[
+        str,
+        typer.Option(
+            "-o",
+            "--out",
+            metavar="FILE",
+            help="File to write: .csv, .xlsx (needs the extra sheets), .parquet or .npy.",
+            show_default=False,
+        ),
+    ],
+    layout: Annotated[
+        str | None,
+        typer.Option(
+            metavar="long|panel|wide|nested",
+            help="A row is a path and step (when absent), an observation, a step, or a path.",
+        ),
+    ] = None,
+    series: Annotated[
+        str | None, typer.Option(metavar="NAME,…", help="Series, in this order; all when absent.")
+    ] = None,
+    paths: Annotated[
+        range | None,
+        typer.Option(parser=numbers_of, metavar="0-99", help="Paths by number, both included; all when absent."),
+    ] = None,
+    steps: Annotated[
+        range | None,
+        typer.Option(parser=numbers_of, metavar="0-95", help="Steps by number, both included; all when absent."),
+    ] = None,
+    decimals: Annotated[
+        int | None, typer.Option(metavar="N", help="Round to so many; as stored when absent.", min=-22, max=22)
+    ] = None,
+    local_time: Annotated[
+        bool, typer.Option("--local-time", help="Times by the clock of the spec's zone, in place of UTC.")
+    ] = False,
+    columns: Columns = None,
+    overwrite: Annotated[bool, typer.Option("--overwrite", help="Replace a file that is there.")] = False,
+) -> None:
+    """Write the ensemble OUT, or some of it, as one file for another tool.
+
+    What the file cannot hold is said before it is written; the file appears when it is whole.
+    """
+    import procgen as pg
+    from procgen.ensemble.export import export as planned
+
+    ready = planned(
+        pg.open_ensemble(source),
+        out,
+        layout=layout,
+        series=None if series is None else [name.strip() for name in series.split(",")],
+        paths=paths,
+        steps=steps,
+        decimals=decimals,
+        local_time=local_time,
+        columns=columns,
+        overwrite=overwrite,
+    )
+    printed(ready.text())
+    with progress("writing") as tick:
+        ready.write(overwrite, tick)
+    printed(f"written, {ready.size_text()}")
