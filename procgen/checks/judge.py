@@ -298,12 +298,12 @@ def kolmogorov(distance: float, n: int) -> Finding:
 
 def share(k: int, n: int, p: float) -> Finding:
     """k of n independent cases, each of probability p: exact (binomial)."""
-    from scipy.stats import binom
+    from scipy.special import bdtr, bdtrc
 
     def log(tail: float, side: float) -> float:
         return math.log(tail) if tail > 1e-290 else -n * _divergence(side, p)
 
-    upper, lower = log(float(binom.sf(k - 1, n, p)), k / n), log(float(binom.cdf(k, n, p)), k / n)
+    upper, lower = log(float(bdtrc(k - 1, n, p)) if k else 1.0, k / n), log(float(bdtr(k, n, p)), k / n)
     return Finding(
         p,
         k / n,

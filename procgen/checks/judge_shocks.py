@@ -47,13 +47,13 @@ def _level_and_spread(series: str, sums: ShockSums, source: str) -> Iterator[Che
             finding = judge.variance((second - mean * mean) * n / (n - 1), 1.0, n - 1)
             yield Check.of(series, "shocks: variance", "all steps", "spread", finding)
         return
-    if no_big_jump(law, n, 1):
+    if no_big_jump(sums.scores, n, 1):
         finding = sum_finding(mean * root, n, sums.scores.summand(1, n), 1 / root)
         yield Check.of(series, "shocks: mean", "all steps", "level", finding, source)
     else:
         finding = score_finding(components[0], n, sums.scores, 0)
         yield Check.of(series, "shocks: level score", "all steps", "level", finding, source)
-    m4 = law.moment(4) if n > 1 and no_big_jump(law, n, 2) else None
+    m4 = law.moment(4) if n > 1 and no_big_jump(sums.scores, n, 2) else None
     if m4 is not None:
         # Around the sample's mean: one summand less, as for normal shocks.
         error = math.sqrt((m4 - 3) / n + 2 / (n - 1))
@@ -65,13 +65,13 @@ def _level_and_spread(series: str, sums: ShockSums, source: str) -> Iterator[Che
         yield Check.of(series, "shocks: spread score", "all steps", "spread", finding)
 
 
-def no_big_jump(law, n: int, order: int, level: float = 1e-6) -> bool:
+def no_big_jump(scores: Scores, n: int, order: int, level: float = 1e-6) -> bool:
     """Whether no single |z|^order can carry the sum of n of them to the tail that a p of `level` lies in."""
+    law, distribution = scores.law, scores.distribution
     m = law.moment(2 * order)
     if m is None or law.moment(3 * order) is None:
         return False
     reach = (REACH * math.sqrt(max(m - (law.moment(order) or 0.0) ** 2, 0.0) * n)) ** (1 / order)
-    distribution = law.distribution()
     return n * float(distribution.sf(reach) + distribution.cdf(-reach)) < 0.1 * level
 
 

@@ -9,6 +9,7 @@ stationary; how far the averages of paths lie apart, of what is.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Any
 
 import numpy as np
@@ -58,12 +59,17 @@ class Pool:
     lags: tuple[int, ...]
     mean: NDArray  # of the window
     covariance: NDArray  # (lags, window): Cov(x(t), x(t - lag)), NaN where t - lag lies before the window
-    exact: NDArray | None = None  # (1 + lags, window): eigenvalues of each average, where its law is exact
+    joint: NDArray | None = None  # (window, window): covariance of the values, where the laws of averages are exact
     slope: NDArray | None = None  # (lags, window): of x(t) on x(t - lag), where there is no exact law
     steady: bool = False  # whether the slopes do not depend on the step
     coarse: str = ""  # why rounding leaves the averages without a theory
     changes: tuple[Changes, ...] = ()
     level: Level | None = None
+
+    @cached_property
+    def exact(self) -> NDArray | None:
+        """(1 + lags, window): eigenvalues of each average; only the process that judges asks for them."""
+        return None if self.joint is None else _eigenvalues(self.joint, self.lags)
 
     @property
     def size(self) -> int:
@@ -86,8 +92,8 @@ def plan_pool(plan: Any, steps: int, blind: bool) -> Pool | None:
     rows[0] += noise(plan.grain)
     pool = Pool(first, steps, lags, mean, rows)
     pool.coarse = _coarse_window(plan, first, float(sds.min()))
-    pool.exact = _eigenvalues(plan, window, lags) if plan.gaussian else None
-    if pool.exact is None:
+    pool.joint = _joint(plan, window) if plan.gaussian else None
+    if pool.joint is None:
         pool.slope = np.zeros(rows.shape)
         for slope, row, lag in zip(pool.slope, rows, lags, strict=True):
             earlier = rows[0, : width - lag]
@@ -139,13 +145,15 @@ def _coarse_window(plan: Any, first: int, smallest: float) -> str:
     return plan.too_coarse(smallest) if hidden or inside.any() else ""
 
 
-def _eigenvalues(plan: Any, window: NDArray, lags: tuple[int, ...]) -> NDArray | None:
-    """Eigenvalues of each average as a quadratic form in independent normals."""
+def _joint(plan: Any, window: NDArray) -> NDArray | None:
+    """Covariance of the stored values of a window."""
     gamma = plan.theory.covariance(window[:, None], window[None, :])
-    if gamma is None:
-        return None
-    width = len(window)
-    gamma = 0.5 * (gamma + gamma.T) + noise(plan.grain) * np.eye(width)
+    return None if gamma is None else 0.5 * (gamma + gamma.T) + noise(plan.grain) * np.eye(len(window))
+
+
+def _eigenvalues(gamma: NDArray, lags: tuple[int, ...]) -> NDArray:
+    """Eigenvalues of each average as a quadratic form in independent normals."""
+    width = len(gamma)
     values, vectors = np.linalg.eigh(gamma)
     root = vectors * np.sqrt(np.maximum(values, 0.0))
     rows = [np.zeros(width)]

@@ -73,16 +73,18 @@ def self_normalised(level: float, gauge: float) -> float:
 
 def variance(level: float, sigma2: float, dof: int) -> float:
     """Detectable excess of a normal variance over `sigma2`, exactly."""
-    from scipy.stats import chi2
+    from scipy.special import chdtri
 
-    return sigma2 * (float(chi2.isf(level / 2, dof)) / float(chi2.ppf(1 - POWER, dof)) - 1)
+    return sigma2 * (float(chdtri(dof, level / 2)) / float(chdtri(dof, POWER)) - 1)
 
 
 def ratio(level: float, m: int, n: int) -> float:
     """Detectable excess over 1 of the ratio of two normal variances, exactly."""
-    from scipy.stats import f
+    from scipy.special import betaincinv
 
-    return float(f.isf(level / 2, m, n)) / float(f.ppf(1 - POWER, m, n)) - 1
+    # m F / (n + m F) has a beta law, and so has what is left of 1.
+    low, high = float(betaincinv(n / 2, m / 2, level / 2)), float(betaincinv(m / 2, n / 2, 1 - POWER))
+    return (1 - low) * (1 - high) / (low * high) - 1
 
 
 def covariance(level: float, s1: float, s2: float, rho: float, n: int) -> float:
@@ -102,15 +104,9 @@ def covariance(level: float, s1: float, s2: float, rho: float, n: int) -> float:
 
 def chi_square(level: float, dof: int) -> float:
     """Detectable noncentrality of a sum of `dof` squares of unit normals (one-sided level)."""
-    from scipy.optimize import brentq
-    from scipy.stats import chi2, ncx2
+    from scipy.special import chdtri, chndtrinc
 
-    point = float(chi2.isf(level, dof))
-    start = (needed(2 * level) + Z_POWER) ** 2 + 10 * math.sqrt(dof)
-    high = start
-    while ncx2.sf(point, dof, high) < POWER:
-        high *= 2
-    return float(brentq(lambda x: ncx2.sf(point, dof, x) - POWER, 0.0, high, rtol=1e-6))
+    return float(chndtrinc(chdtri(dof, level), dof, 1 - POWER))
 
 
 def gap(level: float, n: int) -> float:

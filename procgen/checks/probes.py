@@ -18,6 +18,7 @@ from procgen.checks import rounding
 from procgen.checks.pools import Pool, noise, plan_pool
 from procgen.checks.saddle import summand
 from procgen.checks.scores import Scores
+from procgen.theory.mixedlaw import Normal
 
 PAIR_LIMIT = 36  # pairs of series that are compared
 
@@ -201,6 +202,8 @@ def _marginals(plan: SeriesPlan) -> None:
     chosen = sorted({moving[0], moving[len(moving) // 2], moving[-1]}) if len(moving) else []
     for i in map(int, chosen):
         law = partial(plan.theory.marginal, int(plan.steps[i]))
+        if plan.gaussian:
+            law = partial(Normal, float(plan.mean[i]), float(np.sqrt(plan.variance[i])))
         if np.isfinite(plan.variance[i]) and (plan.gaussian or law() is not None):  # a normal law is always known
             plan.scores[i] = Scores(Marginal(law, float(plan.mean[i]), float(np.sqrt(plan.variance[i]))))
 

@@ -13,6 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.checks.saddle import REACH, Summand, summand
+from procgen.theory.mixedlaw import Normal
 
 BINS = 4096
 _ORDER = 8  # Legendre components; two of them are spent on level and spread
@@ -49,7 +50,7 @@ class Scores:
 
     @cached_property
     def distribution(self) -> Any:
-        return self.law.distribution()
+        return Normal() if self.gaussian else self.law.distribution()
 
     def normal_scores(self, z: NDArray) -> NDArray:
         """g for shocks z of any shape: by a fine table (error below 1e-6), exactly where the table is too coarse."""

@@ -203,8 +203,12 @@ def anderson_darling_statistic(u: NDArray) -> float:
 
 def kolmogorov(distance: float, n: int) -> float:
     """log P(D_n > distance), two-sided: exact law for n <= 100,000, the limit law above."""
-    from scipy.special import kolmogorov as limit
-    from scipy.stats import kstwo
+    if n > 100_000:
+        from scipy.special import kolmogorov as limit
 
-    p = float(kstwo.sf(distance, n)) if n <= 100_000 else float(limit(math.sqrt(n) * distance))
+        p = float(limit(math.sqrt(n) * distance))
+    else:
+        from scipy.stats import kstwo
+
+        p = float(kstwo.sf(distance, n))
     return math.log(p) if p > 1e-290 else min(0.0, _LOG2 - 2 * n * distance**2)

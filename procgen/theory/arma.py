@@ -12,6 +12,7 @@ in Demeure & Mullis (1989), IEEE Trans. ASSP 37, 1226-1230.
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from fractions import Fraction
 from functools import lru_cache
 
@@ -22,6 +23,7 @@ from procgen.theory.unknown import Unknown
 
 WEAK, HOPELESS = 1e6, 1e12  # condition numbers: beyond the first rational numbers are used while that is quick
 LARGEST_RATIONAL = 24
+SMALL = 64
 LONGEST_RECURSION = 1 << 21  # beyond this lag single values come from powers of the companion matrix
 
 
@@ -112,22 +114,33 @@ def cross_covariance(first: tuple[float, ...], second: tuple[float, ...]) -> Cro
 
 def _split(a: np.ndarray, b: np.ndarray) -> tuple[np.ndarray, np.ndarray, float]:
     """u, v (v_0 = 0) with u(z) b(1/z) + v(1/z) a(z) = 1, and the condition number of the system."""
-    from scipy.linalg import lapack, lu_factor, lu_solve
-
     system, one, ahead = _system(a, b)
     size = len(system)
-    factors = lu_factor(system)
-    solution = lu_solve(factors, one)
+    solve, condition = _solver(system)
+    solution = solve(one)
     # One refinement with a long residual: it costs a product and removes most of the error of elimination.
     residual = one - system.astype(np.longdouble) @ solution.astype(np.longdouble)
-    solution = solution + lu_solve(factors, residual.astype(float))
-    inverse = lapack.dgecon(factors[0], np.abs(system).sum(axis=0).max())[0]
-    condition = 1.0 / max(float(inverse), 1e-18)
+    solution = solution + solve(residual.astype(float))
     if condition > HOPELESS and size > LARGEST_RATIONAL:
         raise Unknown(f"its coefficients are too near to a unit root (condition number {condition:.1g})")
     if condition > WEAK and size <= LARGEST_RATIONAL:
         solution = np.array([float(x) for x in _rational_solution(system, one)])
     return solution[: ahead + 1], np.concatenate([[0.0], solution[ahead + 1 :]]), condition
+
+
+def _solver(system: np.ndarray) -> tuple[Callable[[np.ndarray], np.ndarray], float]:
+    """What solves a linear system, and its condition number; SciPy is imported for what NumPy would be slow at only."""
+    size = np.abs(system).sum(axis=0).max()
+    if len(system) <= SMALL:
+        try:
+            inverse = np.linalg.inv(system)
+        except np.linalg.LinAlgError:
+            return (lambda right: np.full(right.shape, np.nan)), 1e18
+        return (lambda right: inverse @ right), min(float(size * np.abs(inverse).sum(axis=0).max()), 1e18)
+    from scipy.linalg import lapack, lu_factor, lu_solve
+
+    factors = lu_factor(system)
+    return (lambda right: lu_solve(factors, right)), 1.0 / max(float(lapack.dgecon(factors[0], size)[0]), 1e-18)
 
 
 def rational_split(first: tuple[float, ...], second: tuple[float, ...]) -> tuple[list[Fraction], list[Fraction]]:

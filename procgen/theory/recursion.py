@@ -8,17 +8,20 @@ from __future__ import annotations
 import numpy as np
 
 SHORTEST, LONGEST = 1024, 1 << 16  # steps of a block
+SHORT = 4096  # products that are done sooner than SciPy's linear algebra is imported
 BAND = 1 << 20  # numbers in the band of a block
 
 
 def recursed(phi: tuple[float, ...], coming: np.ndarray) -> np.ndarray:
     """y(t) = coming(t) + sum of phi_i y(t - i) from y = 0 before the first; float64, (steps,)."""
-    from scipy.linalg.lapack import dtbtrs
-
     p, count = len(phi), len(coming)
     y = np.array(coming, float)
     if not p or not count:
         return y
+    if p * count <= SHORT:
+        return _one_by_one(phi, y)
+    from scipy.linalg.lapack import dtbtrs
+
     size = min(count, max(SHORTEST, min(LONGEST, BAND // (p + 1))))
     rows = min(p, size - 1) + 1
     band = np.empty((rows, size), order="F")
@@ -33,3 +36,11 @@ def recursed(phi: tuple[float, ...], coming: np.ndarray) -> np.ndarray:
             block[:reach] += np.convolve(past, weights)[p - 1 : p - 1 + reach]
         block[:] = dtbtrs(band[:, : len(block)], block, uplo="L", diag="U")[0]
     return y
+
+
+def _one_by_one(phi: tuple[float, ...], coming: np.ndarray) -> np.ndarray:
+    y: list[float] = coming.tolist()
+    for t in range(1, len(y)):
+        for i, c in enumerate(phi[:t], start=1):
+            y[t] += c * y[t - i]
+    return np.array(y)
