@@ -13,6 +13,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.checks import missing
 from procgen.checks.errors import ErrorSums
 from procgen.checks.probes import CrossPlan, SeriesPlan
 from procgen.checks.recover import Cannot, Expected, Route, dither
@@ -35,6 +36,7 @@ class Plan:
     routes: Mapping[str, Route | Cannot]
     shock_pairs: Mapping[tuple[str, str], Expected]
     squares: Mapping[str, Squares] = field(default_factory=dict)
+    gaps: dict[str, Any] = field(default_factory=dict)  # series -> the term that leaves values out
     noise: dict[str, float] = field(default_factory=dict)  # series -> variance that rounding adds to a shock
 
     def __post_init__(self) -> None:
@@ -56,7 +58,13 @@ class Plan:
             for i, j in pair.places
         }
         self.moment_pairs += list(between)
+        self.gappy = np.repeat([plan.name in self.gaps for plan in self.series], sizes)
         self.kept = [(column, i) for column, plan in enumerate(self.series) for i in sorted(plan.scores)]
+
+    def seen_with(self, place: int) -> list[int]:
+        """The kept values without which that one is left out: those of all series but for those with gaps."""
+        gappy = [self.series[column].name in self.gaps for column, _ in self.kept]
+        return [place] if gappy[place] else [k for k, gap in enumerate(gappy) if not gap]
 
     def look(self, values: Mapping[str, NDArray], first_path: int) -> None:
         """See from the first values, (paths, steps) of all series, what rounding does to the shocks."""
@@ -114,6 +122,7 @@ class Gather:
         }
         self.errors = {name: ErrorSums() for name in self.routes if name not in scores}
         self.events = {name: EventSums(way.watched) for name, way in self.routes.items() if way.watched}
+        self.events |= {missing.key(name): missing.GapSums(term) for name, term in plan.gaps.items()}
         self.squares = {name: SquareSums(each) for name, each in plan.squares.items()}
         self.cross = {pair: sums_of(stated) for pair, stated in plan.shock_pairs.items()}
 
@@ -123,7 +132,7 @@ class Gather:
         self.paths += len(probes)
         self.structure.close(first_path, prints)
         rows = probes - _means(plan)
-        self.moments.absorb(rows)
+        self.moments.absorb(np.where(plan.gappy, 0.0, rows))  # gaps of one series must not cost the others their paths
         self.deviations.absorb(rows)
         self.products.absorb(_products(plan, rows))
         self.crossed.absorb(_cross_products(plan, rows))

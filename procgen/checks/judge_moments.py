@@ -140,8 +140,8 @@ def _growth(gather: Gather, column: int) -> Iterator[Check]:
 def _laws(gather: Gather, column: int) -> Iterator[Check]:
     plan = gather.plan.series[column]
     mine = [(k, i) for k, (owner, i) in enumerate(gather.plan.kept) if owner == column]
-    values = gather.kept.values()
     for k, i in mine:
+        values = gather.kept.values(gather.plan.seen_with(k))
         if len(values) < 8:
             continue
         law = plan.scores[i].distribution

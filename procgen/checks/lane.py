@@ -13,6 +13,7 @@ from itertools import chain
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.checks import missing
 from procgen.checks.blocks import BLOCK
 from procgen.checks.gather import Gather, Plan
 from procgen.checks.pools import PoolLane
@@ -70,6 +71,9 @@ class Lane:
             x = np.where(np.isfinite(x), x, np.nan)  # named there; from here on the path is left out
         for i in np.flatnonzero((plan.steps >= self.step) & (plan.steps < self.step + len(x))):
             self.probes[:, self.plan.offset[column] + i] = x[plan.steps[i] - self.step]
+        if plan.name in self.plan.gaps:
+            counted = missing.key(plan.name)
+            sums.events[counted].absorb(x, self.step, self.events[counted])
         pool = self.pools[column]
         if pool is not None:
             pool.absorb(x, self.step)

@@ -27,6 +27,7 @@ class Precision:
     random: bool
     discrete: bool = False  # few values: float32 may hold them all, and paths may be equal
     reach: extremes.Reach | None = None  # how far values may lie from their mean
+    gaps: bool = False  # whether values may be missing
 
 
 @dataclass
@@ -46,8 +47,9 @@ class Structure:
         what = self.series[column]
         prints += fingerprint(x, first_step, column)
         finite = bool(np.isfinite(x).all())
-        if not finite:
-            _note(self.not_finite, what.name, ~np.isfinite(x), first_path, first_step)
+        wrong = None if finite else np.isinf(x) if what.gaps else ~np.isfinite(x)
+        if wrong is not None and wrong.any():
+            _note(self.not_finite, what.name, wrong, first_path, first_step)
         if what.decimals is not None and abs(what.decimals) <= 15:
             scaled = x * 10.0**what.decimals
             with np.errstate(invalid="ignore"):
@@ -57,6 +59,7 @@ class Structure:
         elif what.type != "int64" and what.random and not what.discrete:
             stride = max(1, min(_SAMPLE, self.steps // 32))
             sample = x[-first_step % stride :: stride]
+            sample = sample[~np.isnan(sample)] if what.gaps else sample
             with np.errstate(over="ignore", invalid="ignore"):
                 fits = int(np.count_nonzero(sample.astype(np.float32) == sample))
                 whole = int(np.count_nonzero(np.rint(sample) == sample))
@@ -96,7 +99,7 @@ class Structure:
     def checks(self, chance_of_equal: dict[str, float]) -> Iterator[Check]:
         """The facts as checks; `chance_of_equal` gives the probability that two paths of a series are equal."""
         for what in self.series:
-            yield self._finite(what.name)
+            yield self._finite(what)
             yield self._precision(what)
             if what.reach is not None:
                 n = self.steps * sum(len(rows) for _, rows in self.prints)
@@ -104,12 +107,13 @@ class Structure:
         if self.prints:
             yield from self._copies(chance_of_equal)
 
-    def _finite(self, name: str) -> Check:
-        fault = ""
+    def _finite(self, what: Precision) -> Check:
+        fault, name = "", what.name
         if name in self.not_finite:
             count, path, step = self.not_finite[name]
             fault = f"{count} value{'s are' if count > 1 else ' is'} not finite, the first at path {path}, step {step}"
-        return Check.fact(name, "finite values", "all steps", fault, "every value is a finite number")
+        every = "every value that is there" if what.gaps else "every value"
+        return Check.fact(name, "finite values", "all steps", fault, f"{every} is a finite number")
 
     def _precision(self, what: Precision) -> Check:
         declared = what.type if what.decimals is None else f"{what.type}, {what.decimals} decimals"

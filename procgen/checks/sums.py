@@ -150,6 +150,6 @@ class Kept:
         """Add those of the paths that follow."""
         self.absorb(other.rows)
 
-    def values(self) -> NDArray:
-        """(paths, size), paths with a value that is not finite left out."""
-        return self.rows[np.isfinite(self.rows).all(axis=1)]
+    def values(self, places: Sequence[int]) -> NDArray:
+        """(paths, size), paths left out where a value at one of the places is not finite."""
+        return self.rows[np.isfinite(self.rows[:, places]).all(axis=1)]

@@ -12,6 +12,7 @@ from typing import Any
 
 import numpy as np
 
+from procgen.checks import missing
 from procgen.checks.atoms import few_shocks, may_stay
 from procgen.checks.extremes import Reach
 from procgen.checks.gather import Gather, Plan
@@ -120,6 +121,7 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
     from procgen.theory import theory
 
     graph = build(spec)
+    gaps = missing.taken_out(graph)
     th = theory(spec, graph)
     steps = steps or spec.time.steps
     series, routes, precision = [], {}, []
@@ -138,7 +140,8 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
     pairs = {(a.series, b.series): expected(a, b, th.axis.space) for a, b in list(combinations(ways, 2))[:PAIR_LIMIT]}
     unseen = [name for name, way in routes.items() if isinstance(way, Cannot) or way.scores is None]
     squares = {name: found for name in unseen if (found := plan_squares(th[name], steps)) is not None}
-    return Plan(steps, series, precision, plan_cross(series, th.cross), routes, pairs, squares)
+    plan = Plan(steps, series, precision, plan_cross(series, th.cross), routes, pairs, squares, gaps)
+    return missing.adapted(plan, gaps) if gaps else plan
 
 
 def grain_of(declared: Any, theory: Any, steps: int) -> float:
@@ -170,8 +173,10 @@ def _periods(graph: Any, name: str) -> list[int]:
 def judged(gather: Gather) -> Iterator[Check]:
     """All checks of what one pass has gathered."""
     plan = gather.plan
-    yield from gather.structure.checks({p.name: _chance_of_equal(p, plan) for p in plan.series})
+    equal = {p.name: _chance_of_equal(p, plan) + missing.chance_of_none(plan, p) for p in plan.series}
+    yield from gather.structure.checks(equal)
     for column, series in enumerate(plan.series):
+        yield from missing.checks(gather, series.name)
         if not plan.precision[column].random:
             yield _known(gather, series)
             continue

@@ -1,0 +1,183 @@
+"""Series with missing values: what is left out, how that itself is judged, and what can be judged of the rest.
+
+What is missing is so whatever the values are, so that a value that is present has the law that it would have with all
+the others there (Rubin 1976). Moments at probes are those of the paths in which they are present; shocks are found by a
+Kalman filter that passes over gaps, or by undoing what lies between them.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import replace
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from procgen.checks.kalman import Kalman
+from procgen.checks.probes import _product_sds
+from procgen.checks.recover import Cannot, Expected, Route
+from procgen.checks.special import EventSums
+from procgen.checks.verdict import Check
+
+LARGEST_STATE = 8  # elements of the state up to which a filter is run with gains of its own for each path
+_WHY = "values are missing"
+
+
+def taken_out(graph: Any) -> dict[str, Any]:
+    """The terms that leave values out, by series; in the graph, their bodies take their places."""
+    from procgen.terms.graph import gaps_of
+
+    found = {name: node.term for name, root in graph.series.items() if (node := gaps_of(root)) is not None}
+
+    def without(node: Any) -> Any:
+        return node.inputs[0] if hasattr(node, "term") and node.term.gaps else node
+
+    if found:
+        for node in graph.order():
+            node.inputs = tuple([without(part) for part in node.inputs])
+        graph.series = {name: without(root) for name, root in graph.series.items()}
+    return found
+
+
+def adapted(plan: Any, gaps: dict[str, Any]) -> Any:
+    """A plan whose series have gaps: only what allows for them is judged."""
+    for column, series in enumerate(plan.series):
+        if series.name not in gaps:
+            continue
+        plan.precision[column].gaps = True
+        if series.gaussian and not series.unknown:
+            series.gaussian = False  # judged path by path, where a value is there
+            pairs = [*((i, i) for i in range(len(series.steps))), *series.pairs]
+            series.product_sd = _product_sds(series, pairs)
+        series.pool = None
+        plan.routes[series.name] = through(plan.routes[series.name])
+        plan.squares.pop(series.name, None)
+    for pair in plan.cross:
+        pair.gaussian = pair.gaussian and not {plan.series[k].name for k in (pair.first, pair.second)} & set(gaps)
+    for names in list(plan.shock_pairs):
+        ways = [plan.routes[name] for name in names]
+        if any(isinstance(way, Cannot) for way in ways):
+            del plan.shock_pairs[names]
+        elif any(isinstance(way.kalman, GapKalman) for way in ways) and plan.shock_pairs[names] != Expected():
+            unknown = f"{_WHY}: what prediction errors beside them have in common is not computed"
+            plan.shock_pairs[names] = Expected(unknown=unknown)
+    plan.gaps = gaps
+    return plan
+
+
+def through(way: Route | Cannot) -> Route | Cannot:
+    """The way to shocks of a series with gaps, or why there is none."""
+    if isinstance(way, Cannot):
+        return way
+    if way.ranked is not None or way.few is not None:
+        return Cannot(f"{_WHY}: the ranks of what comes after a gap, given what came before it, are not computed")
+    if way.scores is None:
+        return Cannot(f"{_WHY}: prediction errors beside them, of shocks that are not normal, are not judged")
+    if way.kalman is None:
+        return way
+    if len(way.kalman.c) > LARGEST_STATE:
+        return Cannot(f"{_WHY}: a filter that passes over them would have a state of {len(way.kalman.c)} elements")
+    return replace(way, kalman=GapKalman.of(way.kalman))
+
+
+class GapKalman(Kalman):
+    """A Kalman filter with gains of their own for each path: where a value is missing, it only predicts."""
+
+    @classmethod
+    def of(cls, other: Kalman) -> GapKalman:
+        """The same filter."""
+        made = cls(other.a, other.q, other.c, other.p0, other.rounding)
+        made.prepare(256)
+        return made
+
+    def start(self, paths: int) -> Any:
+        state = np.zeros((len(self.c), paths))
+        return state, np.repeat(np.array(self.p0, float)[:, :, None], paths, axis=2)
+
+    def innovations(self, y: NDArray, state: Any, step: int) -> tuple[NDArray, Any]:
+        out = np.full(y.shape, np.nan)
+        s, p = state
+        for row, values in enumerate(y):
+            pc = _along(p, self.c[None, :, None])
+            spread = _along(pc[None], self.c[None, :, None])[0]
+            used = np.isfinite(values) & (spread > 1e-14 * self._scale)
+            f = np.where(used, spread + self.rounding, 1.0)
+            error = np.where(used, np.where(used, values, 0.0) - _along(s[None], self.c[None, :, None])[0], 0.0)
+            out[row] = np.where(used, error / np.sqrt(f), np.nan)
+            gain = np.where(used, self._moved(pc) / f, 0.0)
+            s = self._moved(s) + gain * error
+            p = self._moved(self._moved(p).transpose(1, 0, 2)).transpose(1, 0, 2) + self.q[:, :, None]
+            p = p - gain[:, None] * gain[None] * f
+            p = 0.5 * (p + p.transpose(1, 0, 2))
+        return out, (s, p)
+
+    def _moved(self, x: NDArray) -> NDArray:
+        """A x for x (d, …, paths)."""
+        flat = x.reshape(len(x), -1)
+        return _along(np.broadcast_to(flat, (len(x), *flat.shape)), self.a[:, :, None]).reshape(x.shape)
+
+
+def _along(x: NDArray, weights: NDArray) -> NDArray:
+    """Sums over the second axis, term by term: the same for a path whatever stands beside it."""
+    total = x[:, 0] * weights[:, 0]
+    for k in range(1, x.shape[1]):
+        total = total + x[:, k] * weights[:, k]
+    return total
+
+
+class GapSums(EventSums):
+    """How often values are missing, given whether the value before was."""
+
+    def __init__(self, term: Any):
+        super().__init__(term.watched)
+        self.term = term
+
+    def lane(self, paths: int) -> Any:
+        return GapLane(super().lane(paths))
+
+    def absorb(self, seen: Any, first_step: int, lane: Any) -> None:
+        """Add a tile of values (steps, paths), NaN where missing."""
+        steps = first_step + np.arange(len(seen))
+        super().absorb(self.term.events(seen, (seen, seen), (), lane.state, steps), first_step, lane.sums)
+        lane.state = {"on": np.isnan(seen[-1:]).astype(float)}
+
+    def finish(self, lane: Any) -> None:
+        super().finish(lane.sums)
+
+    def checks(self, series: str) -> Iterator[Check]:
+        for row in super().checks(series):
+            row.kind = "level"  # each share stands for itself
+            yield row
+
+
+class GapLane:
+    """What is carried for one range of paths."""
+
+    def __init__(self, sums: NDArray):
+        self.sums = sums
+        self.state: Any = None
+
+
+def key(series: str) -> str:
+    """The name under which the gaps of a series are counted among the events."""
+    return f"{series}: gaps"
+
+
+def checks(gather: Any, series: str) -> Iterator[Check]:
+    """How many values are missing, and how many in a row; what is not judged because of that."""
+    if series not in gather.plan.gaps:
+        return
+    yield from gather.events[key(series)].checks(series)
+    note = f"{_WHY}: not judged, because hardly a path has a value at every step of a window"
+    yield Check(series, "averages over steps", "all steps", "memory", outcome="reported", note=note)
+
+
+def chance_of_none(plan: Any, series: Any) -> float:
+    """Probability that two paths have no value at all, or only such as rounding makes equal."""
+    term = plan.gaps.get(series.name)
+    if term is None:
+        return 0.0
+    _, stay = term.chain.chances
+    none = float(term.share * stay ** (plan.steps - 1)) ** 2
+    return min(1.0, none * plan.steps) if series.grain else none
