@@ -118,6 +118,16 @@ def test_ranges_that_overlap_are_compared_where_they_do(folder, tmp_path):
     assert far.compared is None and "no path is in both" in far.text()
 
 
+def test_layouts_and_parts_do_not_matter(folder, tmp_path):
+    for layout in ("wide", "nested", "panel"):
+        pg.render(folder / "spec.yaml", tmp_path / layout, layout=layout)
+        assert pg.difference(folder / "base", tmp_path / layout).equal
+        found = pg.difference(tmp_path / layout, folder / "crisis", at=[3])
+        assert found.paired == pg.difference(folder / "base", folder / "crisis", at=[3]).paired
+    short = pg.render(folder / "spec.yaml", steps=30)
+    assert [one.state for one in pg.difference(short, tmp_path / "wide").series] == ["equal", "equal"]
+
+
 def test_other_seeds_share_no_shocks_and_are_not_paired(folder):
     spec = pg.load(folder / "spec.yaml")
     found = pg.difference(pg.render(spec), pg.render(spec.changed(seed=6)))

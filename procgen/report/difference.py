@@ -13,22 +13,31 @@ if TYPE_CHECKING:
     from procgen.checks.difference import Difference, SeriesDifference, Side
     from procgen.checks.paired import Paired
 
-MOST = 20  # terms of one line
+MOST = 20  # names in one line
+LINES = 60  # of a list; all is in --json
 
 
 def difference_text(difference: Difference) -> str:
     """What differs in meaning, what became of each series, and the paired figures."""
     lines = [f"a  {_side(difference.a)}", f"b  {_side(difference.b)}", ""]
-    lines += ["What differs in meaning:", *(f"  {change}" for change in difference.meaning)]
+    lines += ["What differs in meaning:", *_some([f"  {change}" for change in difference.meaning])]
     if not difference.meaning:
         lines[-1] = "Both mean the same."
-    lines += ["", _headline(difference), *_series(difference)]
+    lines += ["", _headline(difference), *_some([*_series(difference)])]
     if difference.paired:
         lines += ["", *_paired(difference.paired), "", *wrap(CAUTION, 100)]
     alone = [one.name for one in difference.series if one.state == "differs" and not one.shares]
     if alone and difference.compared is not None:
         lines += ["", f"no shocks are shared by {', '.join(alone[:MOST])}: independent draws, which cannot be paired"]
     return "\n".join(lines)
+
+
+def _some(lines: list[str]) -> list[str]:
+    return lines if len(lines) <= LINES else [*lines[:LINES], *_more(len(lines) - LINES)]
+
+
+def _more(count: int) -> list[str]:
+    return [f"  and {count:,} more; --json lists them all"]
 
 
 def _side(side: Side) -> str:
@@ -85,7 +94,8 @@ def _paired(rows: tuple[Paired, ...]) -> list[str]:
     ]  # fmt: skip
     return [
         f"Paired change from a to b, path by path with the same shocks ({rows[0].paths:,} paths):",
-        *("  " + line for line in table(head, cells)),
+        *("  " + line for line in table(head, cells[:LINES])),
+        *(_more(len(cells) - LINES) if len(cells) > LINES else ()),
         "variance saved: of the mean change, against draws of a and b that are independent of each other",
     ]
 

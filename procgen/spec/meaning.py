@@ -6,6 +6,7 @@ the same. Terms are found by their labels. Titles and notes mean nothing.
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, fields
 from typing import Any
@@ -197,10 +198,10 @@ def _by_group(found: list[Change], old: Spec, new: Spec) -> Iterator[Change]:
     for change in found:
         group, rest = _group_of(change.place, old, new)
         alike.setdefault((group, rest, change.old, change.new), []).append(change)
+    sizes = Counter(one.group for one in {**old.series, **new.series}.values())
     for (group, rest, before, after), same in alike.items():
-        size = sum(1 for one in {**old.series, **new.series}.values() if one.group == group)
-        if group and len(same) == size and size > 1:
-            yield Change(f"groups.{group}{rest} ({size} series)", before, after)
+        if group and len(same) == sizes[group] > 1:
+            yield Change(f"groups.{group}{rest} ({len(same)} series)", before, after)
         else:
             yield from same
 

@@ -69,6 +69,7 @@ class _Kitchen:
         for name, owner in owners.items():
             for entry, _ in walk(owner.of):
                 self.entries[name].setdefault(entry.label, entry)
+        self.known: dict[int, Hashable] = {}
         self.bodies = {name: owner.of for name, owner in owners.items()}
         self.joint = {node.name: node.joint for node in self.graph.order() if getattr(node, "joint", None) is not None}
 
@@ -84,20 +85,22 @@ class _Kitchen:
         for entry in self.bodies[owner]:
             self._entry(entry, owner, parts, seen)
 
-    def _entry(self, entry: Entry, owner: str, parts: list[Part], seen: set[int]) -> None:
+    def _entry(self, entry: Entry, owner: str, parts: list[Part], seen: set[int], starts: bool = True) -> None:
         name = f"{owner}.{entry.label}"
         if id(entry) in seen:
             parts.append((name, "again"))
             return
         seen.add(id(entry))
-        parts.append((name, self._own(entry, owner)))
+        if id(entry) not in self.known:
+            self.known[id(entry)] = self._own(entry, owner)
+        parts.append((name, self.known[id(entry)]))
         if entry.kind == "use":
             self._used(entry.values["name"], parts, seen)
         for inner, is_shock in children(entry):
             parts.append((name, "shock" if is_shock else "body"))
             self._entry(inner, owner, parts, seen)
-        for other in self._starts_with(name):
-            self._entry(self.entries[other[0]][other[1]], other[0], parts, seen)
+        for other, label in self._starts_with(name) if starts else ():  # all that lead it: they need not say theirs
+            self._entry(self.entries[other][label], other, parts, seen, starts=False)
 
     def _used(self, name: str, parts: list[Part], seen: set[int]) -> None:
         owner, *rest = name.split(".")

@@ -1,10 +1,13 @@
 """What differs in meaning: place by place, whatever way it is written."""
 
+from pathlib import Path
+
 import pytest
 
 import procgen as pg
 from procgen.spec.meaning import changes
 
+GALLERY = sorted((Path(__file__).parents[2] / "specs").glob("*.yaml"))
 GARCH = {"sd": 6, "alpha": 0.1, "beta": 0.85}
 BASE = {
     "procgen": 1,
@@ -113,3 +116,13 @@ def test_a_series_that_is_added_is_one_change():
     assert [(c.place, c.old, c.new) for c in found] == [("series.first", None, "constant + white_noise")]
     back = changes(pg.load(more), pg.load(BASE))
     assert [str(c) for c in back] == ["series.first: gone, was constant + white_noise"]
+
+
+@pytest.mark.parametrize("file", GALLERY, ids=lambda file: file.stem)
+def test_a_spec_of_the_gallery_means_what_it_means_and_a_seed_is_one_change(file):
+    spec = pg.load(file)
+    assert changes(spec, pg.load(spec.raw)) == ()
+    assert [c.place for c in changes(spec, spec.changed(seed=spec.seed + 1))] == ["seed"]
+    for name in spec.variants:
+        places = [c.place for c in changes(spec, spec.variant(name))]
+        assert sorted(places) == sorted(setting.place for setting in spec.written.variants[name])
