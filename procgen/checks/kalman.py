@@ -65,6 +65,8 @@ class Kalman:
 
         `state` is the prediction for `step`, the first row of `y`. Rows that the theory calls constant are NaN.
         """
+        if not self.a.any():
+            return self._without_memory(y, step), state
         out, t = np.empty_like(y), 0
         while t < len(y):
             at, left = step + t, len(y) - t
@@ -75,6 +77,13 @@ class Kalman:
             state = self._take(self._chunk(at, min(count, _CHUNK)), y[t : t + count], state, out[t : t + count])
             t += count
         return out, state
+
+    def _without_memory(self, y: NDArray, step: int) -> NDArray:
+        """Innovations where nothing is carried from step to step: the prediction is always 0."""
+        self._extend(step + len(y) - 1)
+        roots = np.array(self.roots[step : step + len(y)])
+        roots = np.append(roots, np.full(len(y) - len(roots), self.roots[-1]))
+        return y * (1.0 / np.where(roots > 0, roots, np.nan))[:, None]
 
     def _take(self, chunk: Chunk, y: NDArray, state: NDArray, out: NDArray) -> NDArray:
         """Innovations of rows that are a whole number of chunks; the state after them."""
