@@ -99,18 +99,20 @@ def checks(series: str, reach: Reach, known: Sequence[Far], n: int) -> Iterator[
     logs = [math.log(n) + reach.log_chance(far) for far in known]
     outside = sum(log_p < _OUTSIDE for log_p in logs)
     allowed = _reach(reach, first, n)
-    alone = outside <= min(KEPT - 1, max(1, n // _RARE)) and first[0] > _ABSURD * allowed
-    # A few absurd values are a fault of the data; many, or hardly outside ones, speak of the law.
+    same = outside > 1 and len({far[3] for far in known[:outside]}) == 1
+    alone = (same or outside <= min(KEPT - 1, max(1, n // _RARE))) and first[0] > _ABSURD * allowed
+    # A few absurd values, or one that stands for all, are a fault of the data; others speak of the law.
     kind = "structure" if alone or not outside else "law"
     finding = Finding(first[4], first[3], first[5], min(0.0, logs[0]), _detect(reach, first, n))
     check = Check.of(series, FARTHEST, f"path {-first[1]}, step {-first[2]}", kind, finding)
     if outside:
         many = "one value" if outside == 1 else f"{outside} values" if outside < KEPT else f"at least {KEPT} values"
-        each = "" if outside == 1 else "the farthest "
+        each = "" if outside == 1 else "such as " if same else "the farthest "
         check.note = (
             f"{many} {'far ' if alone else ''}outside what the law allows: {each}{check.probe}, value "
             f"{number(first[3], 6)} (expected about {number(first[4], 4)} ± {number(first[5], 3)})"
         )
+        check.note += "; all of them are this value, as if it marked what is missing" if same and alone else ""
     yield check
 
 

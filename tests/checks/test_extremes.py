@@ -101,9 +101,17 @@ def test_one_absurd_value_leads_with_its_place(body):
 
 def test_several_absurd_values_are_counted():
     values = draw(spec_of(AR, 400, 200, 3))
-    values["x"][:3, 50] = -999.0
+    values["x"][:3, 50] = -999.0, -998.0, 1001.0
     line = verdict(AR, values).headline[0]
-    assert line.startswith("x: 3 values far outside what the law allows: the farthest path ") and "value −999 (" in line
+    assert line.startswith("x: 3 values far outside what the law allows: the farthest path ") and "value " in line
+
+
+def test_a_value_that_marks_what_is_missing_is_told_as_one():
+    values = draw(spec_of(AR, 400, 200, 3))
+    values["x"][np.random.default_rng(1).random((400, 200)) < 0.01] = -999.0
+    line = verdict(AR, values).headline[0]
+    assert line.startswith("x: at least 32 values far outside what the law allows: such as path ")
+    assert "value −999 (expected about 10 ± 1.25); all of them are this value, as if it marked what is missing" in line
 
 
 @pytest.mark.parametrize(
