@@ -16,6 +16,7 @@ import numpy as np
 from procgen.chance.blocks import BLOCK
 from procgen.chance.elementary import exp, log, log1p
 from procgen.chance.gamma import STIRLING, log_gamma
+from procgen.chance.kernel import is_compiling
 from procgen.chance.normal import normal_quantile, normal_tail
 
 Array = np.ndarray
@@ -23,6 +24,7 @@ Ratio = Callable[[Any, Array], Array]
 LARGEST = 2.0**50  # a mean beyond is no count that float64 can hold
 _SMALL = 26.0  # from this mean on a Poisson count is found from its areas
 _CLIMB = 64  # counts that are reached by adding up; the rest is found from areas
+_STEPS = np.arange(1.0, _CLIMB + 1.0)
 _RARE = 1e-5  # an upper area below is added up by itself, for what is left of 1 has no digits there
 _FOUND = 1e-15
 _TINY = 1e-300
@@ -83,16 +85,33 @@ def _by_blocks(function: Callable[[Array, Array], Array], u: Array, mean: Array)
 def _poisson(u: Array, mean: Array) -> Array:
     out = np.empty(u.shape)
     small = mean < _SMALL
-    at = np.flatnonzero(small)
-    if len(at):
+    at: Any = np.flatnonzero(small)
+    if len(at) == len(u):
+        out, at = _summed("poisson", u, exp(-mean), (mean,), lambda k, i: mean[i] / k)
+    elif len(at):
         m = mean[at]
-        out[at], left = _climbed(u[at], exp(-m), lambda k, i: m[i] / k)
+        out[at], left = _summed("poisson", u[at], exp(-m), (m,), lambda k, i: m[i] / k)
         at = np.concatenate([at[left], np.flatnonzero(~small)])
     else:
         at = np.flatnonzero(~small)
     if len(at):
         out[at] = _poisson_by_area(u[at], mean[at])
     return out
+
+
+def _summed(name: str, u: Array, nothing: Array, of: tuple, ratio: Ratio) -> tuple[Array, Array]:
+    """`_climbed`, compiled as far as that goes where kernels are compiled; `of` are the numbers in the ratio."""
+    if not is_compiling():
+        return _climbed(u, nothing, ratio)
+    from procgen.chance import compiled_counts
+
+    out = np.empty(u.shape)
+    getattr(compiled_counts, name)(u, nothing, *of, _CLIMB, 1.0 - _RARE, 1.0 - 10.0 * _RARE, out)
+    at = np.flatnonzero(out == compiled_counts.LEFT)
+    if len(at):
+        out[at], left = _climbed(u[at], nothing[at], lambda k, i: ratio(k, at[i]))
+        at = at[left]
+    return out, at
 
 
 def _climbed(u: Array, nothing: Array, ratio: Ratio) -> tuple[Array, Array]:
@@ -206,7 +225,10 @@ def _negative_binomial(u: Array, mean: Array, size: float) -> Array:
     at = np.flatnonzero(small)
     m = share[at]
     nothing = exp(-size * log1p(mean[at] / size))
-    out[at], left = _climbed(u[at], nothing, lambda k, i: (k - 1.0 + size) / k * m[i])
+    ratios = (_STEPS - 1.0 + size) / _STEPS
+    out[at], left = _summed(
+        "negative_binomial", u[at], nothing, (m, ratios), lambda k, i: (k - 1.0 + size) / k * m[i]
+    )
     at = np.concatenate([at[left], np.flatnonzero(~small)])
     if len(at):
         out[at] = _negative_binomial_by_area(u[at], mean[at], size)

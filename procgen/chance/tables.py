@@ -16,9 +16,12 @@ import numpy as np
 from procgen.chance.counting import negative_binomial, poisson
 from procgen.chance.elementary import exp, log, log1p
 from procgen.chance.gamma import log_gamma
+from procgen.chance.kernel import is_compiling
 
 Array = np.ndarray
 GRID = 2.0**52
+_SHIFT = 42
+_CELLS = 1 << (52 - _SHIFT)
 LONGEST = 1_000_000  # chances in a table
 _PER_ROOT_12 = 0.2886751345948129
 _LEAST = 2.0**-70  # a chance that no uniform sees, far from the likely ones
@@ -40,11 +43,22 @@ class Table:
         self.first = first
         self.places = places.astype(np.int64)
 
+    @cached_property
+    def guide(self) -> tuple[Array, Array]:
+        """For each cell of equal uniforms the number that its first place gives, and whether its last gives another."""
+        cells = np.arange(_CELLS, dtype=np.int64) << _SHIFT
+        low = np.searchsorted(self.places, cells, side="right")
+        return low, np.searchsorted(self.places, cells + ((1 << _SHIFT) - 1), side="right") > low
+
     def counts(self, u: Array) -> Array:
-        """The least numbers that are enough for uniforms u, as float64."""
-        return self.first + np.searchsorted(self.places, np.floor(u * GRID).astype(np.int64), side="right").astype(
-            np.float64
-        )
+        """The least numbers that are enough for uniforms u, as float64: by a guide (Chen & Asau 1974) or a search."""
+        place = np.floor(u * GRID).astype(np.int64)
+        low, open_ = self.guide
+        cell = place >> _SHIFT
+        found = low[cell]
+        at = np.nonzero(open_[cell])
+        found[at] = np.searchsorted(self.places, place[at], side="right")
+        return self.first + found.astype(np.float64)
 
 
 @dataclass(frozen=True)
@@ -62,11 +76,9 @@ class Poisson:
         """E (X - mean)^k for k = 2, 3, 4."""
         return self.mean, self.mean, self.mean + 3.0 * self.mean * self.mean
 
-    @cached_property
+    @property
     def table(self) -> Table:
-        m, top = self.mean, int(np.floor(self.mean))
-        middle = exp(top * log(m) - m - log_gamma(top + 1.0))
-        return _table(top, float(middle), lambda k: m / k)
+        return _of_poisson(self.mean)
 
     def counts(self, u: Array, mean: Array | None = None) -> Array:
         """Counts of uniforms, with this mean or with others."""
@@ -97,13 +109,9 @@ class NegativeBinomial:
         fourth = second * (1.0 + 6.0 * each * (1.0 + each))
         return second, second * (1.0 + 2.0 * each), fourth + 3.0 * second * second
 
-    @cached_property
+    @property
     def table(self) -> Table:
-        r, q = self.size, self.mean / (self.mean + self.size)
-        top = int(np.floor(max((r - 1.0) * q / (1.0 - q), 0.0)))
-        logs = log_gamma(top + r) - log_gamma(top + 1.0) - log_gamma(r)
-        middle = exp(logs - r * log1p(self.mean / r) - top * log1p(r / self.mean))
-        return _table(top, float(middle), lambda k: (k - 1.0 + r) / k * q)
+        return _of_negative_binomial(self.mean, self.size)
 
     def counts(self, u: Array, mean: Array | None = None) -> Array:
         """Counts of uniforms, with this mean or with others."""
@@ -113,6 +121,22 @@ class NegativeBinomial:
         from scipy import stats
 
         return stats.nbinom(self.size, self.size / (self.size + (self.mean if mean is None else mean)))
+
+
+@lru_cache(maxsize=64)
+def _of_poisson(m: float) -> Table:
+    top = int(np.floor(m))
+    middle = exp(top * log(m) - m - log_gamma(top + 1.0))
+    return _table(top, float(middle), lambda k: m / k)
+
+
+@lru_cache(maxsize=64)
+def _of_negative_binomial(mean: float, r: float) -> Table:
+    q = mean / (mean + r)
+    top = int(np.floor(max((r - 1.0) * q / (1.0 - q), 0.0)))
+    logs = log_gamma(top + r) - log_gamma(top + 1.0) - log_gamma(r)
+    middle = exp(logs - r * log1p(mean / r) - top * log1p(r / mean))
+    return _table(top, float(middle), lambda k: (k - 1.0 + r) / k * q)
 
 
 def _table(top: int, middle: float, ratio: Callable[[float], float]) -> Table:
@@ -159,6 +183,22 @@ class Thinning:
         n = n.astype(np.int64)
         place = np.searchsorted(self.keys, np.floor(u * GRID).astype(np.int64) + (n << 52), side="right")
         return (place - self.offset[n] + self.first[n]).astype(np.float64)
+
+    def moved(self, x: Array, new: Array, stay: Array) -> Array:
+        """Rows of counts from x before them: those who stay for uniforms `stay`, and the new ones.
+
+        Rows end before a count that no table is made for.
+        """
+        out = np.empty_like(new)
+        if is_compiling():
+            from procgen.chance.compiled_counts import thinned
+
+            return out[: thinned(x, new, stay, GRID, self.keys, self.offset, self.first, out)]
+        for t in range(len(new)):
+            if x.max() > self.most:
+                return out[:t]
+            x = np.add(self.counts(x, stay[t]), new[t], out=out[t])
+        return out
 
 
 @lru_cache(maxsize=16)

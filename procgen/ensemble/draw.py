@@ -15,6 +15,7 @@ from procgen.ensemble.source import Run, Source
 Tick = Callable[[int], None]  # called with the rows just drawn; may raise to stop the work
 State = dict[str, np.ndarray]
 
+WIDE_REPAYS = 8_000_000  # values of terms that gain, some 50 ns each; until then they are drawn plain
 COMPILING_REPAYS = 1_000_000  # narrow steps; each costs 1 to 7 µs in the interpreter, and compiling a second or two
 
 
@@ -24,6 +25,7 @@ class Drawer:
     def __init__(self, source: Source, tick: Tick = lambda rows: None, narrow_steps: int = 0):
         self.source, self.tick = source, tick
         self.compile = narrow_steps > COMPILING_REPAYS and kernel.available()
+        self._left = WIDE_REPAYS if getattr(source, "gains", False) and kernel.available() else None
         self._runs: dict[tuple[int, int], Run] = {}
         self._states: dict[tuple[int, int], tuple[int, State]] = {}
 
@@ -36,6 +38,9 @@ class Drawer:
             for block in lanes(batch, self.source.depth):
                 rows = slice(block.first_path - batch.first_path, block.end_path - batch.first_path)
                 self._rows(block, {name: values[rows] for name, values in out.items()})
+        if self._left is not None:
+            self._left -= batch.rows
+            self.compile = self.compile or self._left < 0
 
     def _rows(self, block: Block, out: Mapping[str, np.ndarray]) -> None:
         run, step = self._run(block), block.first_step

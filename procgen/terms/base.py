@@ -98,6 +98,7 @@ class Term:
     correlates: ClassVar[bool] = False  # whether its first draw may be named in `correlation`, as those of a noise may
     by_rows: ClassVar[tuple[str, ...]] = ()  # parameters that may be rows, one value a path, in `recurse`
     finer: ClassVar[str] = ""  # the parameter that says in how many parts its body cuts a step; empty where none does
+    compiles: bool = False  # whether many paths side by side are drawn quicker where kernels are compiled
     burns_in: ClassVar[bool] = False  # whether `begin` reads its inputs from the first row on, a few rows at a time
     gaps: ClassVar[bool] = False  # whether some of its values are missing; nothing but a factor may follow then
     portable: ClassVar[bool] = True

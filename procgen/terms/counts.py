@@ -35,6 +35,10 @@ class Counts(Term):
         """Central moments of orders 2, 3, 4 in powers of the mean, from power 0 on."""
         raise NotImplementedError
 
+    @property
+    def compiles(self):
+        return self.arity > 1  # of one mean they are looked up
+
     def draws(self):
         return (Draw("count", UNIFORM),)
 

@@ -73,6 +73,8 @@ class Inar(Term):
             chances.append(chance)
         return Table(np.array(chances))
 
+    compiles = True
+
     def draws(self):
         return (Draw("innovation", UNIFORM), Draw("thinning", UNIFORM))
 
@@ -101,18 +103,16 @@ class Inar(Term):
 
     def _moved(self, new, stay, x):
         """Counts of the steps of `new` arrivals, from x before them."""
-        out = np.empty_like(new)
-        for t in range(len(new)):
-            x = self._staying(x, stay[t]) + new[t]
-            out[t] = x
+        out, done = np.empty_like(new), 0
+        while done < len(new):  # the table grows with the counts that come, which changes no entry
+            most = 31
+            while most < x.max():
+                most = 2 * most + 1  # up to 2047, for which a table has room
+            rows = thinning(self.alpha, most).moved(x, new[done:], stay[done:])
+            out[done : done + len(rows)] = rows
+            done += len(rows)
+            x = out[done - 1]
         return out
-
-    def _staying(self, x, u):
-        """How many of x stay; the table grows with the counts that come, which changes no entry."""
-        most = 31
-        while most < x.max():
-            most = 2 * most + 1  # up to 2047, for which a table has room
-        return thinning(self.alpha, most).counts(x, u)
 
     def unranked(self):
         return ""

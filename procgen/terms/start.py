@@ -127,6 +127,8 @@ def _cross_of_one(a: float, q: float, b: float) -> float:
 
 def decay_length(a: Array, negligible: float = NEGLIGIBLE) -> int:
     """The smallest n with every entry of |Aⁿ| at most `negligible`, found by doubling and then halving."""
+    if a.size == 1:
+        return _decay_of_one(float(a[0, 0]), negligible)
     powers = [a]
     while np.max(np.abs(powers[-1])) > negligible:
         if 2 ** len(powers) > LONGEST:
@@ -136,6 +138,21 @@ def decay_length(a: Array, negligible: float = NEGLIGIBLE) -> int:
     for k in range(len(powers) - 2, -1, -1):
         further = matmul(reached, powers[k])
         if np.max(np.abs(further)) > negligible:
+            n, reached = n + 2**k, further
+    return n + 1
+
+
+def _decay_of_one(a: float, negligible: float) -> int:
+    """`decay_length` of a single number, by the same products in plain floats: each path may have its own."""
+    powers = [a]
+    while abs(powers[-1]) > negligible:
+        if 2 ** len(powers) > LONGEST:
+            raise ValueError(f"the recursion still feels its start after {LONGEST:,} steps")
+        powers.append(powers[-1] * powers[-1])
+    n, reached = 0, 1.0
+    for k in range(len(powers) - 2, -1, -1):
+        further = reached * powers[k]
+        if abs(further) > negligible:
             n, reached = n + 2**k, further
     return n + 1
 

@@ -1,0 +1,71 @@
+"""Counts by adding up chances, and survivors of a thinning: the loops of `counting` and `tables`, compiled.
+
+Imported only where kernels are compiled (numba, the extra `speed`). Every number comes by the operations of the plain
+form in their order, so that the bits are the same; what needs more than adding up is left to the plain form.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+
+from procgen.chance.kernel import compiled_function
+
+LEFT = -1.0  # in place of a count that is not found here
+
+
+@compiled_function
+def poisson(u, nothing, mean, climb, rare, near, out):
+    """The least counts that are enough for uniforms u, from the chances of none."""
+    for i in range(u.shape[0]):
+        wanted, chance, below, count = u[i], nothing[i], nothing[i], LEFT
+        for k in range(climb):
+            if wanted > rare and below > near:
+                break
+            if not wanted > below:
+                count = float(k)
+                break
+            chance = chance * (mean[i] / (k + 1.0))
+            below = below + chance
+        out[i] = count
+
+
+@compiled_function
+def negative_binomial(u, nothing, share, ratios, climb, rare, near, out):
+    """The same, of negative binomial counts; share: mean / (mean + size); ratios: (k - 1 + size) / k from k = 1 on."""
+    for i in range(u.shape[0]):
+        wanted, chance, below, count = u[i], nothing[i], nothing[i], LEFT
+        for k in range(climb):
+            if wanted > rare and below > near:
+                break
+            if not wanted > below:
+                count = float(k)
+                break
+            chance = chance * (ratios[k] * share[i])
+            below = below + chance
+        out[i] = count
+
+
+@compiled_function
+def thinned(x, new, stay, grid, keys, offset, first, out):
+    """Rows of counts from x before them: who stays of the last ones, and the new ones.
+
+    keys, offset, first: of a `Thinning`; rows stop before a count that is beyond it. Returns how many there are.
+    """
+    most = offset.shape[0] - 1
+    for t in range(new.shape[0]):
+        last = x if t == 0 else out[t - 1]
+        for lane in range(x.shape[0]):
+            if last[lane] > most:
+                return t
+        for lane in range(x.shape[0]):
+            n = int(last[lane])
+            place = np.int64(np.floor(stay[t, lane] * grid)) + (np.int64(n) << np.int64(52))
+            low, high = offset[n], keys.shape[0] if n == most else offset[n + 1]
+            while low < high:
+                middle = (low + high) >> 1
+                if keys[middle] <= place:
+                    low = middle + 1
+                else:
+                    high = middle
+            out[t, lane] = float(low - offset[n] + first[n]) + new[t, lane]
+    return new.shape[0]
