@@ -72,8 +72,9 @@ class Lane:
         for i in np.flatnonzero((plan.steps >= self.step) & (plan.steps < self.step + len(x))):
             self.probes[:, self.plan.offset[column] + i] = x[plan.steps[i] - self.step]
         if plan.name in self.plan.gaps:
-            counted = missing.key(plan.name)
-            sums.events[counted].absorb(x, self.step, self.events[counted])
+            counted = sums.events[missing.key(plan.name)]
+            assert isinstance(counted, missing.GapSums)
+            counted.count(x, self.step, self.events[missing.key(plan.name)])
         pool = self.pools[column]
         if pool is not None:
             pool.absorb(x, self.step)

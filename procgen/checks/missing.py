@@ -26,7 +26,7 @@ _WHY = "values are missing"
 
 def taken_out(graph: Any) -> dict[str, Any]:
     """The terms that leave values out, by series; in the graph, their bodies take their places."""
-    from procgen.terms.graph import gaps_of
+    from procgen.terms.misfits import gaps_of
 
     found = {name: node.term for name, root in graph.series.items() if (node := gaps_of(root)) is not None}
 
@@ -136,11 +136,11 @@ class GapSums(EventSums):
     def lane(self, paths: int) -> Any:
         return GapLane(super().lane(paths))
 
-    def absorb(self, seen: Any, first_step: int, lane: Any) -> None:
+    def count(self, x: NDArray, first_step: int, lane: Any) -> None:
         """Add a tile of values (steps, paths), NaN where missing."""
-        steps = first_step + np.arange(len(seen))
-        super().absorb(self.term.events(seen, (seen, seen), (), lane.state, steps), first_step, lane.sums)
-        lane.state = {"on": np.isnan(seen[-1:]).astype(float)}
+        steps = first_step + np.arange(len(x))
+        self.absorb(self.term.events(x, (x, x), (), lane.state, steps), first_step, lane.sums)
+        lane.state = {"on": np.isnan(x[-1:]).astype(float)}
 
     def finish(self, lane: Any) -> None:
         super().finish(lane.sums)

@@ -140,8 +140,8 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
     pairs = {(a.series, b.series): expected(a, b, th.axis.space) for a, b in list(combinations(ways, 2))[:PAIR_LIMIT]}
     unseen = [name for name, way in routes.items() if isinstance(way, Cannot) or way.scores is None]
     squares = {name: found for name in unseen if (found := plan_squares(th[name], steps)) is not None}
-    plan = Plan(steps, series, precision, plan_cross(series, th.cross), routes, pairs, squares, gaps)
-    return missing.adapted(plan, gaps) if gaps else plan
+    whole = Plan(steps, series, precision, plan_cross(series, th.cross), routes, pairs, squares, gaps)
+    return missing.adapted(whole, gaps) if gaps else whole
 
 
 def grain_of(declared: Any, theory: Any, steps: int) -> float:

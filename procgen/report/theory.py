@@ -80,6 +80,10 @@ def _many(count: int, what: str) -> str:
 def _series(theory: SeriesTheory, facts: dict[str, Any], unit: str | None, lags: int) -> list[str]:
     lines = [f"{theory.name}{f' ({unit})' if unit else ''}: {facts['stationarity']['verdict']}"]
     lines += _wrapped(reason for reason in facts["stationarity"]["reasons"] if not _said_below(reason, facts))
+    if "missing" in facts:
+        share, gap = facts["missing"]["share"], facts["missing"]["gap"]
+        text = f"{share:.4g} of its values are missing, in gaps of {gap:.4g} steps on average, whatever they are"
+        lines += _wrapped([f"{text}; what follows is said of those that are there"])
     lines += _table("step", facts["steps"], [("mean", facts["mean"]), ("variance", facts["variance"])])
     lines += _memory(theory, facts)
     lines += _spectrum(facts["spectral_density"])

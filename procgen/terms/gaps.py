@@ -83,7 +83,7 @@ class Missing(Term):
         enter, stay = self.chain.chances
         return axis.offering(body, missing=axis.chain(self.address, UNIFORM, self.share, stay - enter))
 
-    def equation(self, body):
+    def equation(self, body, *chain):
         if self.gap is None:
             return f"y[t] = {body}[t], missing with probability {number(self.share)} at each step by itself"
         enter, stay = self.chain.chances

@@ -17,6 +17,7 @@ from procgen.spec.model import Entry, Fault, Place, Spec, SpecError
 from procgen.terms import catalogue
 from procgen.terms.base import Array, Node, Term
 from procgen.terms.combine import Hidden, Scaled, Sum
+from procgen.terms.misfits import gaps_of, refuse_gaps, refuse_uneven
 from procgen.terms.mixing import Group
 from procgen.terms.noise import WhiteNoise
 from procgen.terms.start import JointStart
@@ -52,14 +53,15 @@ class Graph:
         self._hidden: dict[tuple[int, str], Node] = {}
         self._count = 0
         self._paces: dict[int, int] = {}
-        for owner in (*spec.series.values(), *spec.shared.values()):
-            self._paces.update(_paced(owner.of, 1))
+        bodies = [*(one.of for one in spec.series.values()), *(one.of for one in spec.shared.values())]
+        for body in bodies:
+            self._paces.update(_paced(body, 1))
         self.series = {name: self._owner(name) for name in spec.series}
         for name in spec.shared:
             self._owner(name)
         self._correlate()
-        self._refuse_uneven()
-        self._refuse_gaps()
+        refuse_uneven(self)
+        refuse_gaps(self)
         self._plan()
 
     def resolve(self, name: str) -> Node:
@@ -116,10 +118,14 @@ class Graph:
                     continue
                 yield f"{owner}.{entry.label or entry.kind}", node
 
+    def owned(self) -> list[Node]:
+        """The nodes of every series and shared body."""
+        return [*self._owners.values()]
+
     @property
     def depth(self) -> int:
         """The most steps before step 0 that anything must be drawn from; bounds the paths drawn at a time."""
-        return max((node.head for node in self.order([*self._owners.values()])), default=0)
+        return max((node.head for node in self.order(self.owned())), default=0)
 
     @property
     def pace(self) -> int:
@@ -252,35 +258,13 @@ class Graph:
             for source in group.sources:
                 source.group = group
 
-    def _refuse_uneven(self) -> None:
-        for group in self.groups:
-            if len({source.pace for source in group.sources}) > 1:
-                names = " and ".join(source.name for source in group.sources)
-                message = f"{names} have steps of different length; correlate what runs at the same pace"
-                raise SpecError((Fault(next(iter(self.spec.series.values())).place, message),))
-
-    def _refuse_gaps(self) -> None:
-        for name, series in self.spec.series.items():
-            if series.type == "int64" and gaps_of(self.series[name]) is not None:
-                message = f"an int64 cannot say that a value of {name} is missing"
-                raise SpecError((Fault(series.place, f"{message}; write decimals: 0 in place of type: int64"),))
-        for node in self.order([*self._owners.values()]):
-            if isinstance(node, Node) and not isinstance(node.term, Scaled | Hidden):
-                for part in node.inputs:
-                    if gaps_of(part) is not None:
-                        message = (
-                            f"{node.name} reads {part.name}, whose values are missing at some steps; expected "
-                            f"`missing` around the whole body of a series; put {node.term.kind} inside it"
-                        )
-                        raise SpecError((Fault(node.place, message),))
-
     def gappy(self, name: str) -> bool:
         """Whether what a name points to has missing values."""
         return gaps_of(self.resolve(name)) is not None
 
     def _plan(self) -> None:
         """Decide which terms start jointly, and how far back everything must be drawn."""
-        wanted = [*self._owners.values()]
+        wanted = self.owned()
         # A filter that starts jointly reads no shocks before step 0; any other one, like a walk, does.
         filters = {id(node) for node in self.filters.values() if _stationary(node) is not None}
         self._heads(wanted, passed=filters)
@@ -294,7 +278,7 @@ class Graph:
         return [*lone, *(group.sources for group in self.groups)]
 
     def _start_together(self, sources: tuple[Source, ...]) -> None:
-        noises = {id(n.inputs[0]): n for n in self.order([*self._owners.values()]) if _is_noise(n)}
+        noises = {id(n.inputs[0]): n for n in self.order(self.owned()) if _is_noise(n)}
         nodes, members, chosen = [], [], []
         for i, source in enumerate(sources):
             noise = noises.get(id(source))
@@ -349,13 +333,6 @@ class Graph:
                 )
         if faults:
             raise SpecError(tuple(faults))
-
-
-def gaps_of(node: Any) -> Node | None:
-    """The term that leaves values of a node out, or None."""
-    while isinstance(node, Node) and isinstance(node.term, Scaled):
-        node = node.inputs[0]
-    return node if isinstance(node, Node) and node.term.gaps else None
 
 
 def build(spec: Spec) -> Graph:

@@ -63,14 +63,16 @@ class Rounded(Process):
         return self.to * other.to * out
 
     def with_expression(self, other, t, s):
-        from procgen.theory.laws import is_gaussian
+        from procgen.theory.laws import jointly_gaussian
 
-        if not is_gaussian(other):
+        if not jointly_gaussian(self.body, other):
             return super().with_expression(other, t, s)
         return at_any(self.body, other, t, s) * _slope(*self.shape(t))  # Stein (1981)
 
     def with_process(self, own, other, t, s):
-        if isinstance(other.detail, Rounded):
+        if isinstance(other.detail, Rounded) and self.body.space.gaussian(
+            self.body.sources | other.detail.body.sources
+        ):
             return self.crossed(other.detail, t, s)
         if isinstance(other.detail, Held):
             return other.detail.with_expression(alone(self.body.space, own), s, t)

@@ -103,8 +103,20 @@ class Theory(Mapping[str, SeriesTheory]):
     ) -> dict[str, Any]:
         """What `procgen theory --json` prints."""
         series = {name: theory.as_dict(at, lags, frequencies, horizons) for name, theory in self.series.items()}
+        for name, told in series.items():
+            told.update(self._missing(name))
         cross = [entry for a, b in combinations(self.series, 2) if (entry := self._cross_entry(a, b, at))]
         return {"series": series, "cross": cross, "correlation": [pair.as_dict() for pair in self.correlated]}
+
+    def _missing(self, name: str) -> dict[str, Any]:
+        """How many of the values of a series are missing, and how many in a row; nothing where none are."""
+        from procgen.terms.misfits import gaps_of
+
+        found = None if self.graph is None else gaps_of(self.graph.series.get(name))
+        if found is None:
+            return {}
+        gap = found.term.gap or 1.0 / (1.0 - found.term.share)
+        return {"missing": {"share": found.term.share, "gap": gap}}
 
     def _go_together(self, a: str, b: str) -> bool:
         """Whether something random is behind both series, or correlated."""
