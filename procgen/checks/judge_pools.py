@@ -73,7 +73,7 @@ def _change(plan: SeriesPlan, each: Changes, sample: Sample) -> Check:
     if each.exact is None:
         return limit(plan, what, probe, "spread", sample, each.variance, 2, None)
     finding = judge.quadratic(each.variance + sample.mean, each.exact, sample.n)
-    return Check.of(plan.name, what, probe, "spread", finding)
+    return Check.of(plan.name, what, probe, "spread", judge.of_scale(finding))
 
 
 def _level(plan: SeriesPlan, level: Level, spread: Sample, halves: Sample) -> Iterator[Check]:

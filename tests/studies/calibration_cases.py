@@ -17,7 +17,7 @@ from procgen.chance.laws import LAWS
 from procgen.checks import judge, judge_shocks
 from procgen.checks.judge import Finding, Sample
 from procgen.checks.scores import BINS, Scores, cluster_scores
-from procgen.checks.shocks import CrossSums, ShockSums
+from procgen.checks.shocks import CrossSums, ShockLane, ShockSums
 from procgen.checks.squares import hidden
 from tests.studies.calibration import Case, Findings, far, of_one_number
 
@@ -110,6 +110,28 @@ def slope_of(draw: Draw, n: int, skew: float) -> Findings:
 
     def findings(rng: Rng, count: int) -> Iterator[tuple[Finding, int]]:
         return sample_findings(draw(rng, (count, n)) * draw(rng, (count, n)), None, skew**2)
+
+    return findings
+
+
+def later_slope(draw: Draw, n: int, steps: int, lag: int) -> Findings:
+    """The slope of values on those `lag` steps earlier, averaged over steps, of numbers that are independent."""
+
+    def findings(rng: Rng, count: int) -> Iterator[tuple[Finding, int]]:
+        x = draw(rng, (steps, count, n))
+        return sample_findings(np.einsum("tcn,tcn->cn", x[lag:], x[:-lag]) / (steps - lag), None)
+
+    return findings
+
+
+def halves_slope(draw: Draw, n: int, steps: int, share: float) -> Findings:
+    """The slope of averages of later halves on those of earlier ones, under a level of `share` of a step's variance."""
+
+    def findings(rng: Rng, count: int) -> Iterator[tuple[Finding, int]]:
+        level = math.sqrt(share) * uniform(rng, (count, n))
+        a, b = (level + math.sqrt(1 - share) * draw(rng, (steps, count, n)).mean(axis=0) for _ in range(2))
+        slope = share / (share + (1 - share) / steps)
+        return sample_findings(a * (b - slope * a), None)
 
     return findings
 
@@ -280,6 +302,24 @@ def products(steps: int, paths: int, lag: int) -> Findings:
     return of_one_number(draw, lambda x: judge_shocks._lag_finding(chains, lag, pairs, x), 0.0, math.sqrt(pairs))
 
 
+def by_path(what: str, paths: int, steps: int) -> Findings:
+    """Levels or spreads of paths: sums of scores and of their squares by path, drawn from their laws."""
+    scores = Scores(LAWS["normal"]())
+
+    def findings(rng: Rng, count: int) -> Iterator[tuple[Finding, int]]:
+        levels = math.sqrt(steps) * rng.standard_normal((count, paths))
+        squares = levels**2 / steps + rng.chisquare(steps - 1, (count, paths))
+        for level, square in zip(levels, squares, strict=True):
+            sums, lane = ShockSums(scores, steps), ShockLane(paths)
+            lane.totals[:2], lane.length[:] = (level, square), steps
+            sums.finish(lane)
+            sums.n = paths * steps
+            found = [c.finding for c in judge_shocks._between_paths("x", sums) if c.what == what]
+            yield found[0], 1  # type: ignore[misc]
+
+    return findings
+
+
 def many_products(pairs: int) -> Findings:
     """As many products, each of two normals of its own."""
     return of_one_number(
@@ -387,6 +427,10 @@ CASES = (
     Case("slope between series, 100 of Laplace", 2_000_000, slope_of(laplace, 100, 0.0), 100),
     Case("slope between series, 100 exponentials", 2_000_000, slope_of(exponential, 100, 2.0), 100),
     Case("slope between series, 2,000 lognormals (σ 1)", 200_000, slope_of(lognormal(1.0), 2000, 6.18), 2000),
+    Case("slope over steps, 200 paths of 40 steps, exponentials", 50_000, later_slope(exponential, 200, 40, 8), 8000),
+    Case("slope over steps, 100 paths of 20 steps, lognormals", 100_000, later_slope(lognormal(0.5), 100, 20, 4), 2000),
+    Case("slope of path means, 1,000 paths of 10 steps", 20_000, halves_slope(exponential, 1000, 5, 0.3), 11_000),
+    Case("slope of path means, 200 paths of 40 steps", 50_000, halves_slope(laplace, 200, 20, 0.1), 8200),
     Case("slope of squares, 200 paths of 20 steps, Laplace", 100_000, squares_slope(laplace, 200, 20), 4000),
     Case("slope of squares, 2,000 paths of 20 steps, Laplace", 10_000, squares_slope(laplace, 2000, 20), 40_000),
     Case("slope of squares, 500 paths of 200 steps, Laplace", 5_000, squares_slope(laplace, 500, 200), 100_000),
@@ -417,6 +461,9 @@ CASES = (
     Case("shocks: correlation between series, 30 of ρ 0.5", 10_000_000, between_series(0.5, 30)),
     Case("shocks: variance of sums, 12 stretches of 16 steps", 10_000_000, ratio(12, 180)),
     Case("shocks: variance of sums, 2 stretches of 256 steps", 10_000_000, ratio(2, 510)),
+    Case("shocks: level by path, 30 paths of 200 steps", 200_000, by_path("shocks: level by path", 30, 200), 300),
+    Case("shocks: spread by path, 30 paths of 200 steps", 200_000, by_path("shocks: spread by path", 30, 200), 300),
+    Case("shocks: spread by path, 200 paths of 20 steps", 50_000, by_path("shocks: spread by path", 200, 20), 2000),
     Case("worst of 200 steps", 1_000_000, worst_of(200), 200),
     Case("sums of 6 squares", 10_000_000, squares(6)),
 )

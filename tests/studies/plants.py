@@ -94,6 +94,11 @@ def swayed(x: np.ndarray, size: float, length: int) -> np.ndarray:
     return out
 
 
+def apart(x: np.ndarray, size: float, variance: float) -> np.ndarray:
+    """Averages of paths further apart: their variance, stated as `variance`, is larger by `size`."""
+    return x + (math.sqrt(1 + size / variance) - 1) * x.mean(axis=1, keepdims=True)
+
+
 def widened(x: np.ndarray, size: float, axis: int) -> np.ndarray:
     """Variances 1 ± a, whose normal equivalents are of root mean square `size` a shock: (a sqrt(n/2))² = n size²."""
     return x * np.sqrt(1 + _halves(x, math.sqrt(2) * size, axis))

@@ -28,6 +28,7 @@ from tests.studies.plants import (
     Plant,
     across,
     anderson_darling_shift,
+    apart,
     ar,
     arch_alpha,
     asymmetric,
@@ -97,6 +98,27 @@ def late_pair(size: float, seed: int, paths: int, steps: int) -> Values:
     x = math.sqrt(1 - size**2) * x
     x[:, 1:] += size * y[:, :-1]
     return {"x": x, "y": y}
+
+
+LONG = [{"fractional_gaussian_noise": {"hurst": 0.7, "sd": 1}}, {"white_noise": {"sd": 1}}]
+LONG_MEAN = STEPS ** (2 * 0.7 - 2) + 1 / STEPS  # of fractional Gaussian noise the variance of a mean is n^(2H − 2)
+
+
+def tied(phi: float = 0.8) -> list[Any]:
+    """Counts whose intensity has log-variance 0.16: at lag k it has the covariance 16 (exp(0.16 φ^k) − 1)."""
+    return [{"poisson": {"mean": 4 / math.exp(0.08), "of": [{"ar": {"phi": phi, "total_sd": 0.4}}]}}]
+
+
+def tied_phi(size: float, lag: int) -> float:
+    """The φ at which the slope on the step `lag` earlier is larger by `size`; the variance of a count is 4 + Var m."""
+    variance = 4 + 16 * math.expm1(0.16)
+    slope = 16 * math.expm1(0.16 * 0.8**lag) / variance + size
+    return (math.log1p(slope * variance / 16) / 0.16) ** (1 / lag)
+
+
+def long_walk(sd: float = 0.3) -> list[Any]:
+    """A walk that no filter undoes: of the variance of a change over k steps, k sd² is its own."""
+    return [LONG[0], {"random_walk": {"sd": sd}}]
 
 
 def _wider(total: float, size: float) -> float:
@@ -169,6 +191,12 @@ PLANTS = (
           drawn(lambda d: ar(total_sd=_wider(1, d), law="laplace")), by="sd"),
     Plant("slope over steps", "steps 0–199, lag 1", ar(law="laplace"),
           drawn(lambda d: ar(phi=0.6 + d, law="laplace")), by="φ, same variance"),
+    Plant("slope over steps", "steps 0–199, lag 8", tied(), drawn(lambda d: tied(tied_phi(d, 8))),
+          by="φ of an intensity"),
+    *(Plant("variance of changes", f"{k} steps", long_walk(), drawn(lambda d, k=k: long_walk(math.sqrt(0.09 + d / k))),
+            by="sd of a walk") for k in (8, 32)),
+    Plant("variance of path means", "steps 0–199", LONG, spoilt(LONG, lambda x, d, _: apart(x, d, LONG_MEAN)),
+          by="averages further apart"),
     Plant("prediction errors: mean", "all steps", HEAVY, drawn(lambda d: heavy(level=heavy_level(d))), by="constant"),
     Plant("prediction errors: variance", "all steps", HEAVY, drawn(lambda d: heavy(times=_wider(1, d))), by="both sd"),
     Plant("prediction errors: autocorrelation", "lag 1", HEAVY, drawn(lambda d: heavy(phi=heavy_phi(d))),
