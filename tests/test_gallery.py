@@ -85,7 +85,8 @@ def test_every_term_and_every_law_is_used_somewhere():
 @pytest.mark.parametrize("kind", list(terms()))
 def test_the_example_of_a_term_draws_and_its_page_tells_all_parameters(kind):
     spec = read_text(catalogue.example_spec(kind), terms(), LAWS)
-    assert np.isfinite(pg.render(spec)["x"]).all()
+    x = pg.render(spec)["x"]
+    assert np.isfinite(x[~np.isnan(x)] if terms()[kind].gaps else x).all()
     page = catalogue.page(kind)
     assert all(f"  {name} " in page for name, *_ in catalogue.rows(terms()[kind].parameters))
     assert terms()[kind].source in " ".join(page.split())

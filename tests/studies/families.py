@@ -234,6 +234,14 @@ FAMILIES: Mapping[str, Any] = {
             "d": [{"sum": [{"constant": 5}, {"hold": {"of": [{"exp": _AR}], "every": 2}}]}],
         }
     },
+    "gaps": {
+        "series": {
+            "a": [{"missing": {"of": [{"ar": {"phi": 0.6, "sd": 1}}, {"constant": 3}], "share": 0.1}}],
+            "b": [{"missing": {"of": [{"random_walk": {"sd": 0.3}}, {"white_noise": {"sd": 1}}], "share": 0.2, "gap": 6}}],
+            "c": [{"missing": {"of": [{"ar": {"phi": 0.5, "sd": 1, "law": _T}}], "share": 0.2, "gap": 6}}],
+            "d": [{"ar": {"phi": 0.5, "sd": 1}}],
+        }
+    },
     "moving blocks": {
         "series": {
             "a": [{"moving_blocks": {"values": _RECORD, "length": 4}}, {"trend": {"slope": 0.1}}],
