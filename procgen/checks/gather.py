@@ -68,9 +68,14 @@ class Plan:
 
     def look(self, values: Mapping[str, NDArray], first_path: int) -> None:
         """See from the first values, (paths, steps) of all series, what rounding does to the shocks."""
-        for name, way in self.routes.items():
-            if isinstance(way, Route) and way.grain and way.kalman is None:
-                self.allow({name: _rounding_noise(way, values[name].T, first_path)})
+        for name, way in self.rounded.items():
+            self.allow({name: _rounding_noise(way, values[name].T, first_path)})
+
+    @property
+    def rounded(self) -> dict[str, Route]:
+        """The ways on which rounding adds a noise to the shocks that only values tell."""
+        ways = {name: way for name, way in self.routes.items() if isinstance(way, Route)}
+        return {name: way for name, way in ways.items() if way.grain and way.kalman is None}
 
     def allow(self, noise: Mapping[str, float]) -> None:
         """Take the variance that rounding adds to the shocks of some series as known."""

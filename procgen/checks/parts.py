@@ -93,8 +93,10 @@ def _made(shared: Mapping[str, Any]) -> tuple[OnDisk, Plan]:
     if ensemble.digest != shared["manifest"]:
         raise EnsembleError(f"{shared['out']} was drawn again while it was being read; validate it again")
     plan = plan_of(read_spec(shared["raw"]), ensemble.whole.steps, shared["same_draws"])
-    with contextlib.suppress(EnsembleError):  # what cannot be read is named when its part is gathered
-        plan.look(first_values(named(ensemble.blocks(), shared["columns"]), ensemble.whole), ensemble.whole.first_path)
+    if plan.rounded:
+        with contextlib.suppress(EnsembleError):  # what cannot be read is named when its part is gathered
+            first = first_values(named(ensemble.blocks(), shared["columns"]), ensemble.whole)
+            plan.look(first, ensemble.whole.first_path)
     return ensemble, plan
 
 
