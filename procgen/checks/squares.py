@@ -83,7 +83,7 @@ class SquareSums:
     def absorb(self, x: NDArray, first_step: int, lane: SquareLane) -> None:
         """Add a tile (steps, paths) of values."""
         mean = np.asarray(self.plan.theory.mean(np.arange(first_step, first_step + len(x))))
-        q = np.subtract(x, mean[:, None], out=scratch(*x.shape, 1))
+        q = np.subtract(x, mean[:, None], out=scratch(len(x), x.shape[1], 1))
         np.multiply(q, q, out=q)
         q -= self.plan.variance
         lane.unknown |= ~np.isfinite(q).all(axis=0)

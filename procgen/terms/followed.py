@@ -30,7 +30,11 @@ def follow(chain: Any, values: Array, state: State | None) -> Followed:
     first = [1.0 if chain.owners.index(owner) == i else 0.0 for i, owner in enumerate(chain.owners)]
     chances = np.empty((len(chain.names), *values.shape))
     before, age = np.empty(values.shape), np.empty(values.shape)
-    belief, last, since = (None, None, None) if state is None else (state["belief"], state["last"][0], state["age"][0])
+    belief: Any = None
+    last: Any = None
+    since: Any = None
+    if state is not None:
+        belief, last, since = state["belief"], state["last"][0], state["age"][0]
     for t, x in enumerate(values):
         ahead = _first(chain, x) if belief is None else _next(chain, belief)
         for row, chance in zip(chances, chain.whole(ahead), strict=True):
