@@ -118,6 +118,24 @@ def test_any_number_reads_back_as_the_same(tmp_path, numbers, suffix):
     assert np.array_equal(found, numbers)
 
 
+@pytest.mark.parametrize("suffix", [".csv", ".xlsx", ".parquet", ".npy"])
+@pytest.mark.parametrize("layout", ["long", "panel", "wide"])
+def test_what_is_missing_reads_back_as_missing(tmp_path, suffix, layout):
+    meter = {"missing": {"of": [{"ar": {"phi": 0.7, "sd": 1}}], "share": 0.3}}
+    made = pg.render({"seed": 6, "paths": 12, "time": {"steps": 9}, "series": {"meter": [meter]}})
+    path = tmp_path / f"values{suffix}"
+    if suffix == ".npy":
+        found = np.load(made.export(path))
+    else:
+        found = read(made.export(path, layout=layout))
+        kept = {"long": "meter", "panel": "value", "wide": [f"path_{k}" for k in range(12)]}[layout]
+        found = found[kept].to_numpy().T.reshape(12, 9)
+    assert np.isnan(found).sum() > 10 and np.array_equal(found, made["meter"], equal_nan=True)
+    frames = dict(made.each_path())
+    assert np.array_equal(frames[3]["meter"], made["meter"][3], equal_nan=True)
+    assert np.array_equal(made.panel()["value"], made["meter"].ravel(), equal_nan=True)
+
+
 # the order and the bounds do not depend on how it is stored
 
 

@@ -184,6 +184,29 @@ def test_only_what_can_be_missing_is_nullable(tmp_path, layout, partition):
             assert not any(field.type.value_field.nullable for field in schema if field.name == "tea")
 
 
+@ways
+def test_what_is_missing_is_null_and_nothing_else_can_be(tmp_path, layout, partition):
+    meter = {"of": [{"missing": {"of": [{"ar": {"phi": 0.7, "sd": 1}}], "share": 0.2}}]}
+    raw = {**DEMAND, "series": {**DEMAND["series"], "meter": meter, "small": {**meter, "type": "float32"}}}
+    reveal = ["meter.missing", "tea.mood"]
+    usual = pg.render(raw, reveal=reveal)
+    made = pg.render(raw, tmp_path, layout=layout, partition=partition, reveal=reveal)
+    assert made.digest == usual.digest and pg.check_digest(tmp_path, redraw=True).ok
+    for name in usual.names:
+        assert np.array_equal(made[name], usual[name], equal_nan=True)
+    assert 0 < np.isnan(usual["meter"]).mean() < 1
+    for file in tmp_path.glob("*.parquet"):
+        table = pq.read_table(file)
+        nulls = {name for name in table.schema.names if table[name].null_count}
+        nullable = {field.name for field in table.schema if field.nullable}
+        if layout == "nested":
+            inside = {f.name for f in table.schema if pa.types.is_list(f.type) and f.type.value_field.nullable}
+            assert inside == {"meter", "small", "meter.missing"} & set(table.schema.names) and not nullable
+        else:  # a wide file is of one series, of which some paths may miss nothing
+            assert nulls <= nullable and bool(nulls) == bool(nullable)
+            assert layout == "wide" or nulls == nullable
+
+
 # what is revealed
 
 
@@ -307,6 +330,17 @@ def test_killed_at_any_moment_then_resumed_gives_the_same_digest(tmp_path, layou
     assert made.digest == fake_render(fake_spec(**spec)).digest
     assert fake_check(tmp_path).ok
     assert not (tmp_path / ".state").exists()
+
+
+@pytest.mark.parametrize("layout", ["panel", "nested", "wide"])
+def test_a_write_that_the_system_refuses_leaves_no_part(tmp_path, layout):
+    spec = {"seed": 3, "paths": 2000, "steps": 40, "columns": {"x": {}, "y": {}}}
+    render = start(spec, tmp_path, part_bytes=1 << 19, file_limit=150_000, workers=1, layout=layout)
+    _, errors = render.communicate(timeout=60)
+    assert "refused: a file grew above the limit" in errors and "Traceback" not in errors
+    assert visible(tmp_path) == [] and not list((tmp_path / ".state").glob("*.tmp"))
+    made = fake_render(fake_spec(**spec), tmp_path, resume=True, layout=layout)
+    assert made.digest == fake_render(fake_spec(**spec)).digest
 
 
 @ways
