@@ -50,6 +50,9 @@ class SpecSource:
                 self.graph.resolve(name)
         except KeyError as error:
             raise EnsembleError(f"cannot reveal: {error.args[0]}") from None
+        for name in reveal:
+            if name in spec.series:
+                raise EnsembleError(f"cannot reveal: {name} is a series, which is written anyway; give {name}.LABEL")
         self.columns = [
             Column(s.name, s.type, s.decimals, s.unit, gaps=self.graph.gappy(s.name)) for s in spec.series.values()
         ]

@@ -438,6 +438,7 @@ def test_an_ensemble_written_before_there_were_layouts_is_the_usual_one(tmp_path
         ({"layout": "panel", "columns": {"id": "path"}}, "2 columns of layout panel would be called 'path'"),
         ({"layout": "panel", "columns": {"step": "t"}}, "layout panel has time and no step here"),
         ({"layout": "panel", "columns": {"value": "mood"}, "reveal": REVEAL}, "would be called 'mood'"),
+        ({"reveal": "tea"}, "cannot reveal: tea is a series, which is written anyway; give tea.LABEL"),
     ],
 )
 def test_wrong_layouts_are_explained(tmp_path, how, sentence):
