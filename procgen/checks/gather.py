@@ -90,7 +90,7 @@ _FELT = 1e-9  # a correlation of shocks that is more than rounding
 def sums_of(stated: Expected) -> CrossSums:
     """The sums that a pair of series is judged by."""
     if stated.tie is not None:
-        return TiedSums(stated.same_sides)
+        return TiedSums(stated.same_sides, hasattr(stated.tie, "states"))
     spread = any(abs(c) > _FELT for lag, c in stated.at.items() if lag)  # components of a system, as a rule
     return CrossSums(FAR if spread else NEAR)
 

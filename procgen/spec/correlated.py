@@ -10,8 +10,9 @@ import numpy as np
 from procgen.spec.copulas import COPULA, Ties
 from procgen.spec.declare import INVALID, Domain, Flag, Parameter, Reading, Real, Reals, Records, Schema, read_each
 from procgen.spec.domains import one_or_list
+from procgen.spec.following import BY, ByState, Followers, states_in
 from procgen.spec.links import Links
-from procgen.spec.model import Correlation
+from procgen.spec.model import Correlation, Frozen
 from procgen.spec.nearest import DECIMALS, nearest
 from procgen.spec.tree import Tree
 from procgen.spec.words import did_you_mean, one_of
@@ -67,13 +68,15 @@ class Matrix(Domain):
         return {"type": "array", "items": {"type": "array", "items": Real(at_least=-1, at_most=1).schema()}}
 
 
+_EACH = Parameter("value", "ρ", ByState(Real(above=-1.0, below=1.0)), "correlation of the primary normals")
 _VALUE = Parameter("value", "ρ", Real(above=-1.0, below=1.0), "correlation of the primary normals")
 _FORMS: dict[str, tuple[Parameter, ...]] = {
-    "between": (Parameter("between", "", Names(exactly=2), "the two that are correlated"), _VALUE),
-    "within": (Parameter("within", "", Names(), "names of which any two are correlated alike"), _VALUE),
+    "between": (Parameter("between", "", Names(exactly=2), "the two that are correlated"), _EACH, BY),
+    "within": (Parameter("within", "", Names(), "names of which any two are correlated alike"), _EACH, BY),
     "matrix": (
         Parameter("names", "", Names(), "the rows and columns of the matrix"),
-        Parameter("matrix", "R", Matrix(), "correlations of the primary normals, with 1 on the diagonal"),
+        Parameter("matrix", "R", ByState(Matrix()), "correlations of the primary normals, with 1 on the diagonal"),
+        BY,
         Parameter("repair", "", Flag(), "take the nearest correlation matrix instead of one that is none", False),
         Parameter("moved", "", Real(at_least=0), "by how much the repair moved an entry; written by it", None),
     ),
@@ -110,8 +113,13 @@ def read_correlation(tree: Tree, links: Links, reader: Reading) -> Correlation:
     if len(pairs.order) > MAX_NAMES:
         reader.fault(tree, f"expected at most {MAX_NAMES} correlated names, got {len(pairs.order):,}")
         return Correlation()
+    following = pairs.followers.joined(tuple(pairs.order), pairs.values, SMALLEST, reader)
+    if len(reader.faults) > before:
+        return Correlation()
+    followed = {name for each in following for name in each.names}
     matrix = pairs.matrix()
-    smallest = float(np.linalg.eigvalsh(matrix)[0])
+    rest = [i for i, name in enumerate(pairs.order) if name not in followed]
+    smallest = float(np.linalg.eigvalsh(matrix[np.ix_(rest, rest)])[0]) if rest else 1.0
     if smallest < SMALLEST:
         reader.fault(
             tree,
@@ -120,7 +128,7 @@ def read_correlation(tree: Tree, links: Links, reader: Reading) -> Correlation:
         )
         return Correlation()
     copulas = pairs.ties.joined(tuple(pairs.order), reader)
-    return Correlation(tuple(pairs.order), tuple(tuple(map(float, row)) for row in matrix), copulas)
+    return Correlation(tuple(pairs.order), tuple(tuple(map(float, row)) for row in matrix), copulas, following)
 
 
 def _offer(items: Sequence[Tree]) -> str:
@@ -173,8 +181,8 @@ class _Pairs:
         self.links = links
         self.reader = reader
         self.order: dict[str, int] = {}
-        self.values: dict[tuple[int, int], float] = {}
-        self.ties = Ties()
+        self.values: dict[tuple[int, int], Any] = {}  # numbers, or numbers by state
+        self.ties, self.followers = Ties(), Followers()
 
     def name(self, tree: Tree) -> int | None:
         """Return the number of a name in order of first appearance, or None after a fault."""
@@ -186,7 +194,7 @@ class _Pairs:
             self.order[name] = len(self.order)
         return self.order[name]
 
-    def add(self, trees: Sequence[Tree], first: int | None, second: int | None, value: float) -> None:
+    def add(self, trees: Sequence[Tree], first: int | None, second: int | None, value: Any) -> None:
         """Keep one correlation; `trees` are its names as written."""
         if first is None or second is None:
             return
@@ -202,7 +210,8 @@ class _Pairs:
     def matrix(self) -> np.ndarray:
         matrix = np.eye(len(self.order))
         for (i, j), value in self.values.items():
-            matrix[i, j] = matrix[j, i] = value
+            if not isinstance(value, Frozen):
+                matrix[i, j] = matrix[j, i] = value
         return matrix
 
     def _misnamed(self, name: str) -> str:
@@ -239,11 +248,32 @@ def _read_item(tree: Tree, pairs: _Pairs, reader: Reading) -> None:
         return
     places = [pairs.name(name) for name in names]
     pairs.ties.add(names, values["copula"], tree)
-    rows = _rows(forms[0], tree, values, len(names), reader) if len(reader.faults) == before else None
+    states = states_in(tree, values, pairs.links, reader)
+    if len(reader.faults) > before or states is None:
+        return
+    pairs.followers.add(names, values.get("by"), states, tree)
+    rows = _by_state(forms[0], tree, values, states, len(names), reader)
     for i, first in enumerate(places if rows else []):
         for j in range(i + 1, len(places)):
             assert rows is not None
             pairs.add((names[i], names[j]), first, places[j], rows[i][j])
+
+
+def _by_state(
+    form: str, tree: Tree, values: dict[str, Any], states: Sequence[str], count: int, reader: Reading
+) -> tuple[tuple[Any, ...], ...] | None:
+    """Return the correlations of an item, each a mapping of states to numbers where it has states."""
+    if not states:
+        return _rows(form, tree, values, count, reader)
+    key, each = "matrix" if form == "matrix" else "value", {}
+    for state in states:
+        inside = Tree({**tree.value, key: tree.value[key].value[state]}, tree.place, tree.keys)
+        rows = _rows(form, inside, {**values, key: values[key][state]}, count, reader)
+        if rows is None:
+            return None
+        each[state] = rows
+    places = range(count)
+    return tuple([tuple([Frozen({state: rows[i][j] for state, rows in each.items()}) for j in places]) for i in places])
 
 
 def _names(form: str, values: dict[str, Any]) -> list[Tree] | None:

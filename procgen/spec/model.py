@@ -130,15 +130,34 @@ class Copula:
 
 
 @dataclass(frozen=True)
+class Following:
+    """Names whose correlations follow the state of what `by` names, with a matrix for each of its states."""
+
+    by: str
+    names: tuple[str, ...]
+    states: tuple[str, ...]
+    matrices: tuple[tuple[tuple[float, ...], ...], ...]
+    place: Place = field(compare=False)
+
+    def among(self, wanted: Callable[[str], bool]) -> Following:
+        """Return what it says of some of the names."""
+        kept = [i for i, name in enumerate(self.names) if wanted(name)]
+        matrices = tuple([tuple([tuple([m[i][j] for j in kept]) for i in kept]) for m in self.matrices])
+        return Following(self.by, tuple([self.names[i] for i in kept]), self.states, matrices, self.place)
+
+
+@dataclass(frozen=True)
 class Correlation:
     """Correlation of the primary normals of `names` ("series.label"), in order of first appearance.
 
-    Under one of the `copulas` it is that of the t variables which take the place of the normals.
+    Under one of the `copulas` it is that of the t variables which take the place of the normals. Where it differs by
+    state the matrix has 0, and one of `following` has it.
     """
 
     names: tuple[str, ...] = ()
     matrix: tuple[tuple[float, ...], ...] = ()
     copulas: tuple[Copula, ...] = ()
+    following: tuple[Following, ...] = ()
 
     def among(self, wanted: Callable[[str], bool]) -> Correlation:
         """Return what it says of some of the names."""
@@ -148,6 +167,7 @@ class Correlation:
             tuple([self.names[i] for i in kept]),
             tuple([tuple([self.matrix[i][j] for j in kept]) for i in kept]),
             tuple([copula for copula in copulas if len(copula.names) > 1]),
+            tuple([each for f in self.following if len((each := f.among(wanted)).names) > 1]),
         )
 
 

@@ -42,7 +42,8 @@ class PartRun(Run):
         return self._of_whole(self._kept[key])
 
     def _draw(self, source: Source, first_step: int, steps: int, values: dict[int, Array]) -> None:
-        if steps > FEW:  # burn-ins, whose lengths are each path's own
+        if steps > FEW or (source.group is not None and source.group.by is not None):
+            # burn-ins, whose lengths are each path's own, and what follows the states of each path
             super()._draw(source, first_step, steps, values)
             return
         members = source.group.sources if source.group is not None else (source,)

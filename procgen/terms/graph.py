@@ -15,10 +15,10 @@ import numpy as np
 from procgen.chance.streams import Stream
 from procgen.spec.model import Entry, Fault, Place, Spec, SpecError
 from procgen.terms import catalogue
-from procgen.terms.base import Array, Node, Term
+from procgen.terms.base import Node, Term
 from procgen.terms.combine import Hidden, Scaled, Sum
 from procgen.terms.misfits import gaps_of, refuse_gaps, refuse_uneven
-from procgen.terms.mixing import Group
+from procgen.terms.mixing import Group, followed, groups_of
 from procgen.terms.noise import WhiteNoise
 from procgen.terms.start import JointStart
 from procgen.terms.varied import Varied
@@ -92,13 +92,13 @@ class Graph:
             node = node.inputs[0]
         return node
 
-    def order(self, wanted: list[Any] | None = None) -> list[Any]:
-        """The nodes and sources that the wanted nodes need, inputs first."""
+    def order(self, wanted: list[Any] | None = None, drawn: bool = False) -> list[Any]:
+        """The nodes and sources that the wanted ones need, inputs first; `drawn`: also the states of correlations."""
         done: dict[int, Any] = {}
 
         def visit(node: Any) -> None:
             if id(node) not in done:
-                for part in node.inputs:
+                for part in (*node.inputs, *followed(node)) if drawn else node.inputs:
                     visit(part)
                 done[id(node)] = node
 
@@ -246,14 +246,7 @@ class Graph:
     # chance and the past
 
     def _correlate(self) -> None:
-        names, matrix = self.spec.correlation.names, np.array(self.spec.correlation.matrix, dtype=np.float64)
-        sources, linking, degrees = [self.source_of(name) for name in names], matrix != 0.0, {}
-        for copula in self.spec.correlation.copulas:
-            tied = [names.index(name) for name in copula.names]
-            linking[np.ix_(tied, tied)] = True
-            degrees[tied[0]] = copula.df
-        for linked in _components(linking):
-            group = Group(tuple(sources[i] for i in linked), matrix[np.ix_(linked, linked)], degrees.get(linked[0]))
+        for group in groups_of(self):
             self.groups.append(group)
             for source in group.sources:
                 source.group = group
@@ -304,10 +297,12 @@ class Graph:
             node.joint = (joint, i, tuple(source for _, _, source in nodes))
 
     def _heads(self, wanted: list[Node], passed: set[int]) -> None:
-        order = self.order(wanted)
+        order = self.order(wanted, drawn=True)
         for node in order:
             node.head = 0
         for node in reversed(order):
+            for state in followed(node):
+                state.head = max(state.head, node.head)
             if isinstance(node, Source) or id(node) in passed or node.joint is not None:
                 continue
             try:
@@ -319,7 +314,7 @@ class Graph:
 
     def _refuse_missing_past(self, wanted: list[Node]) -> None:
         faults = []
-        for node in self.order(wanted):
+        for node in self.order(wanted, drawn=True):
             if isinstance(node, Source):
                 continue
             known = node.term.past()
@@ -378,19 +373,3 @@ def _walk(entries: tuple[Entry, ...]) -> Iterator[Entry]:
             yield from _walk((entry.shock,))
         for body in entry.bodies.values():
             yield from _walk(body)
-
-
-def _components(linking: Array) -> list[list[int]]:
-    """Index sets of which one leads to the other by links, each in order, singletons left out."""
-    left, found = list(range(len(linking))), []
-    while left:
-        linked = {left[0]}
-        while True:
-            more = {j for i in linked for j in left if linking[i, j]} | linked
-            if more == linked:
-                break
-            linked = more
-        left = [i for i in left if i not in linked]
-        if len(linked) > 1:
-            found.append(sorted(linked))
-    return found

@@ -5,8 +5,9 @@ Everything here makes values: only portable operations (see `procgen.chance.port
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-from dataclasses import dataclass, field
+from collections.abc import Hashable, Iterator, Sequence
+from dataclasses import dataclass
+from functools import cached_property
 from typing import Any
 
 import numpy as np
@@ -14,7 +15,9 @@ import numpy as np
 from procgen.chance import student_copula
 from procgen.chance.laws import Normal
 from procgen.chance.portable import cholesky
+from procgen.spec.model import Fault, Following, SpecError
 from procgen.terms.base import Array
+from procgen.terms.combine import Scaled
 from procgen.terms.start import weigh
 
 NORMAL = Normal()
@@ -24,33 +27,132 @@ NORMAL = Normal()
 class Group:
     """Sources whose shocks go together, leader first, with the lower factor that mixes what they are made from.
 
-    These are normals; under a t copula, of `df` degrees of freedom, they are the numbers of a spherical t vector.
+    These are normals; under a t copula, of `df` degrees of freedom, they are the numbers of a spherical t vector. Where
+    correlations follow the state that the node `by` gives the number of, there is a matrix for each state.
     """
 
     sources: tuple[Any, ...]
-    matrix: Array
+    matrices: tuple[Array, ...]
     df: float | None = None
-    factor: Array = field(init=False)
+    by: Any = None
 
-    def __post_init__(self):
-        self.factor = cholesky(self.matrix)
+    @property
+    def matrix(self) -> Array:
+        """The one matrix of a group that follows nothing."""
+        return self.matrices[0]
+
+    @cached_property
+    def factors(self) -> Array:
+        """Lower factors, (states, sources, sources)."""
+        return np.stack([cholesky(matrix) for matrix in self.matrices])
 
     @property
     def gaussian(self) -> bool:
         """Whether the normals behind the shocks are jointly normal."""
-        return self.df is None
+        return self.df is None and self.by is None
 
-    def shocks(self, uniforms: Sequence[Array]) -> list[Array]:
-        """Shocks of every source from uniforms of its own, each (steps, paths)."""
+    def made_from(self, place: int) -> tuple[tuple[Any, ...], Hashable]:
+        """The sources that the shocks of one are mixed from, and how; itself alone where it is what it is alone."""
+        rows = self.factors[:, place, :]
         if self.df is None:
-            normals = weigh(self.factor, [NORMAL.shocks(u) for u in uniforms])
-            leads = [np.count_nonzero(weights) == 1 for weights in self.factor]
+            used = [j for j in range(place + 1) if np.any(rows[:, j])]
         else:
-            mixed = weigh(self.factor, student_copula.spherical(self.df, uniforms))
+            used = list(range(place + 1))  # the size of those before it counts, whatever their correlation
+        if used == [place] and (rows[:, place] == 1.0).all():
+            return (self.sources[place],), None
+        weights = tuple([tuple([float(row[j]) for j in used]) for row in rows])
+        return tuple([self.sources[j] for j in used]), (weights, self.df)
+
+    def shocks(self, uniforms: Sequence[Array], states: Array | None = None) -> list[Array]:
+        """Shocks of every source from uniforms of its own, and the number of the state, each (steps, paths)."""
+        if self.df is None:
+            normals = self._weighed([NORMAL.shocks(u) for u in uniforms], states)
+        else:
+            mixed = self._weighed(student_copula.spherical(self.df, uniforms), states)
             normals = [mixed[0], *(student_copula.normals(self.df, x) for x in mixed[1:])]
-            leads = [True, *([False] * len(mixed[1:]))]
         # A leader's shocks come straight from its uniforms, so that being named moves nothing.
+        leads = [len(self.made_from(i)[0]) == 1 for i in range(len(normals))]
         return [
             s.law.shocks(u) if lead else s.law.shocks_from_normals(z)
             for s, u, z, lead in zip(self.sources, uniforms, normals, leads, strict=True)
         ]
+
+    def _weighed(self, vectors: Sequence[Array], states: Array | None) -> list[Array]:
+        """Each row of the factor times the vectors, added in order; what is zero in every state is passed over."""
+        if states is None:
+            return weigh(self.factors[0], vectors)
+        state, out = states.astype(np.int64), []
+        for place, vector in enumerate(vectors):
+            total = None
+            for j, other in enumerate(vectors[: place + 1]):
+                weights = self.factors[:, place, j]
+                if np.any(weights):
+                    part = np.take(weights, state) * other
+                    total = part if total is None else total + part
+            out.append(vector if total is None else total)
+        return out
+
+
+def followed(node: Any) -> tuple[Any, ...]:
+    """What says the state of the correlations of a source; of any other node, nothing."""
+    group = getattr(node, "group", None)
+    return () if group is None or group.by is None else (group.by,)
+
+
+def groups_of(graph: Any) -> Iterator[Group]:
+    """The groups of the sources of a graph, as `correlation` says."""
+    stated = graph.spec.correlation
+    names, matrix = stated.names, np.array(stated.matrix, dtype=np.float64)
+    sources, linking, degrees, follows = [graph.source_of(name) for name in names], matrix != 0.0, {}, {}
+    for copula in stated.copulas:
+        tied = [names.index(name) for name in copula.names]
+        linking[np.ix_(tied, tied)] = True
+        degrees[tied[0]] = copula.df
+    for following in stated.following:
+        tied = [names.index(name) for name in following.names]
+        linking[np.ix_(tied, tied)] = True
+        follows[tied[0]] = following
+    for linked in _components(linking):
+        first, members = linked[0], tuple([sources[i] for i in linked])
+        if first in follows:
+            by, matrices = _followed(graph, follows[first])
+            yield Group(members, matrices, degrees.get(first), by)
+        else:
+            yield Group(members, (matrix[np.ix_(linked, linked)],), degrees.get(first))
+
+
+def _followed(graph: Any, following: Following) -> tuple[Any, tuple[Array, ...]]:
+    """The node that gives the number of the state, and the matrices in the order of these."""
+    from procgen.terms.regimes import chain_of, states_of
+
+    try:
+        node = graph.resolve(following.by)
+    except KeyError as error:
+        raise SpecError((Fault(following.place, error.args[0]),)) from None
+    while isinstance(node.term, Scaled) and node.term.factor == 1.0:
+        node = node.inputs[0]
+    names = states_of(node)
+    if names is None or chain_of(node) is None:
+        what = "a chain that starts stationary, a flag by chance, or the regime of a series that does"
+        raise SpecError((Fault(following.place, f"expected `by` to name {what}; {following.by} is none"),))
+    if set(names) != set(following.states):
+        given = ", ".join(following.states)
+        message = f"expected a value for each state of {following.by} ({', '.join(names)}), got {given}"
+        raise SpecError((Fault(following.place, message),))
+    return node, tuple([np.array(following.matrices[following.states.index(name)]) for name in names])
+
+
+def _components(linking: Array) -> list[list[int]]:
+    """Index sets of which one leads to the other by links, each in order, singletons left out."""
+    left, found = list(range(len(linking))), []
+    while left:
+        linked = {left[0]}
+        while True:
+            more = {j for i in linked for j in left if linking[i, j]} | linked
+            if more == linked:
+                break
+            linked = more
+        left = [i for i in left if i not in linked]
+        if len(linked) > 1:
+            found.append(sorted(linked))
+    return found

@@ -94,6 +94,8 @@ class _Kitchen:
         if id(entry) not in self.known:
             self.known[id(entry)] = self._own(entry, owner)
         parts.append((name, self.known[id(entry)]))
+        for by in self._follows(name):
+            self._used(by, parts, seen)
         if entry.kind == "use":
             self._used(entry.values["name"], parts, seen)
         for inner, is_shock in children(entry):
@@ -139,12 +141,15 @@ class _Kitchen:
         source = self.graph.source_of(name)
         if source.group is None:
             return None
-        sources = source.group.sources
-        row = source.group.factor[[s is source for s in sources].index(True)].tolist()
-        leaders = [(s.stream.seed, s.stream.name, s.stream.label, w) for s, w in zip(sources, row, strict=True) if w]
-        tied = [(copula.df, copula.names[0]) for copula in self.spec.correlation.copulas if name in copula.names]
-        alone = len(leaders) == 1 and leaders[0][-1] == 1.0 and not tied
-        return None if alone else (tuple(leaders), tuple(tied))
+        place = [s is source for s in source.group.sources].index(True)
+        sources, how = source.group.made_from(place)
+        return None if how is None else (tuple([(s.stream.seed, s.stream.name, s.stream.label) for s in sources]), how)
+
+    def _follows(self, name: str) -> Iterator[str]:
+        """Yield what says the state that the correlations of a term follow, where that moves it."""
+        for following in self.spec.correlation.following:
+            if name in following.names and self._mix(name) is not None:
+                yield following.by
 
     def _starts_with(self, name: str) -> Iterator[tuple[str, str]]:
         """Yield the terms, owner and label, whose stationary past is drawn before that of this one, jointly."""

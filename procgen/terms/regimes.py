@@ -130,6 +130,26 @@ class Regimes(Term):
         return f"y[t] = {shown};  {says}"
 
 
+def chain_of(node):
+    """Transitions, shares and owners of the stages behind a node that `states_of` knows; None unless stationary."""
+    if isinstance(node.term, markov.Chain):
+        chain = node.term.chain
+    elif isinstance(node.term, Flag):
+        if node.term.spans:
+            return None
+        enter, stay = node.term.chances
+        moves = np.array([[1.0 - enter, enter], [1.0 - stay, stay]])
+        return moves, np.array([1.0 - node.term.share, node.term.share]), (0, 1)
+    elif isinstance(node.term, Hidden) and isinstance(node.inputs[0].term, Regimes):
+        owner = node.inputs[0]
+        if owner.term.chain is None:
+            return chain_of(owner.inputs[-1])
+        chain = owner.term.chain
+    else:
+        return None
+    return (chain.p, chain.shares, chain.owners) if chain.start is None else None
+
+
 def states_of(node):
     """The names of the states that a node gives the number of; None when it is no chain."""
     if isinstance(node.term, markov.Chain):

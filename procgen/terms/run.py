@@ -34,7 +34,7 @@ class Run:
         self.graph, self.first_path, self.paths = graph, first_path, paths
         self.step = 0
         self.columns: dict[str, Node] = {**graph.series, **{name: graph.resolve(name) for name in reveal}}
-        self._order = graph.order(list(self.columns.values()))
+        self._order = graph.order(list(self.columns.values()), drawn=True)
         self._states: dict[str, State] = {}
         self._begun: dict[Any, Any] = {}
         self._joint: dict[int, list[tuple[Array, Array]]] = {}
@@ -101,12 +101,14 @@ class Run:
             u = source.stream.uniforms(self.first_path, self.paths, first_step, steps)
             values[id(source)] = source.law.shocks(u, out=u)
         else:
-            for member, z in zip(source.group.sources, self._mixed(source.group, first_step, steps), strict=True):
+            states = None if source.group.by is None else values[id(source.group.by)]
+            mixed = self._mixed(source.group, first_step, steps, states)
+            for member, z in zip(source.group.sources, mixed, strict=True):
                 values[id(member)] = z
 
-    def _mixed(self, group: Group, first_step: int, steps: int) -> list[Array]:
+    def _mixed(self, group: Group, first_step: int, steps: int, states: Array | None) -> list[Array]:
         uniforms = [s.stream.uniforms(self.first_path, self.paths, first_step, steps) for s in group.sources]
-        return group.shocks(uniforms)
+        return group.shocks(uniforms, None if states is None else states[len(states) - steps :])
 
     # before step 0
 
@@ -152,7 +154,7 @@ class Run:
         return np.zeros((0, 1)) if rows is None else rows
 
     def _peek(self, node: Any) -> Array:
-        values, _ = self._advance(self.graph.order([node]), np.array([0]), node.pace)
+        values, _ = self._advance(self.graph.order([node], drawn=True), np.array([0]), node.pace)
         return values[id(node)]
 
     def _joint_rows(self, node: Node) -> tuple[Array, Array]:

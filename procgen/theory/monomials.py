@@ -67,7 +67,7 @@ def mean(space: Space, term: Term, steps: np.ndarray) -> np.ndarray:
 
 def covariance(space: Space, m: Term, n: Term, t: np.ndarray, s: np.ndarray) -> np.ndarray:
     """Cov(m(t), n(s)) for steps of one shape."""
-    if not any(space.dependent(a, b) for a in m.sources for b in n.sources):
+    if not space.linked(m.sources, n.sources):
         return np.zeros(t.shape)
     known_part = m.coefficient(t) * n.coefficient(s)
     if m.summed is None and n.summed is None:

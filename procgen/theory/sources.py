@@ -14,7 +14,7 @@ import numpy as np
 
 from procgen.theory.chains import Switching
 from procgen.theory.copula import is_symmetric
-from procgen.theory.ties import NormalTie, Tie
+from procgen.theory.ties import NormalTie, StateTie, Tie
 from procgen.theory.unknown import Unknown
 
 IID, GARCH, SQUARES, OPAQUE, PROCESS = "independent", "garch", "squares", "opaque", "process"
@@ -118,7 +118,28 @@ class Space:
             linked = [g for g in groups if any(self.dependent(source, other) for other in g)]
             merged = [s for g in linked for s in g] + [source]
             groups = [g for g in groups if g not in linked] + [merged]
+        for group in list(groups) if self.ties and len(groups) > 1 else []:
+            behind = self._behind(group)
+            driven = [g for g in groups if g is not group and any(x.key in behind for s in g for x in roots(s))]
+            if driven:
+                group += [s for g in driven for s in g]
+                groups = [g for g in groups if g not in driven]
         return groups
+
+    def _behind(self, group: Iterable[Source]) -> frozenset[str]:
+        """The chains that the correlations within a group follow: alone, none of its sources depends on them."""
+        primary = list(dict.fromkeys(root for source in group for root in roots(source)))
+        ties = [self.tie(a, b) for i, a in enumerate(primary) for b in primary[:i]]
+        return frozenset().union(*(tie.behind for tie in ties if isinstance(tie, StateTie)))
+
+    def linked(self, left: Iterable[Source], right: Iterable[Source]) -> bool:
+        """Whether something of the ones depends on something of the others, be it only together with a third."""
+        ours, theirs = dict.fromkeys(left), dict.fromkeys(right)
+        if any(self.dependent(a, b) for a in ours for b in theirs):
+            return True
+        if not self.ties:
+            return False
+        return any(any(s in ours for s in g) and any(s in theirs for s in g) for g in self.components(ours | theirs))
 
     def covariance(self, a: Source, b: Source) -> float:
         """E a(t) b(t) for sources with constant variance; Unknown, with the reason, where it has no closed form."""

@@ -7,11 +7,12 @@ are far out together.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property, lru_cache
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from procgen.theory.copula import TERMS, hermite_basis, is_symmetric, law_correlation, quantiles_of_normals
 from procgen.theory.unknown import Unknown
@@ -20,6 +21,7 @@ STEP = 0.2  # of the logarithm of the chi-square
 CUT = 70.0  # exp(-CUT) is left out at its lower end
 TOO_COARSE = 1e-4  # a correlation is not given where more of the laws' variance than this lies further out
 LEAST_TAIL = 1e-300
+FORGOTTEN = 1e-15  # what is left of a chain that counts no more
 RESOLVED = 1e-8  # what the rules leave of a correlation under a t copula, found where it is known otherwise
 
 
@@ -105,10 +107,27 @@ Pair = NormalTie | StudentTie
 
 @dataclass(frozen=True)
 class StateTie:
-    """A tie of its own in every state of a chain that is in each for a share of the time."""
+    """A tie of its own in every state of a stationary chain.
 
-    shares: tuple[float, ...]
+    `by` and `names` are what the chain and its states are called, `moves` its transitions between stages, the shares of
+    these, and the states that they belong to; `behind` are the keys of the sources that drive it.
+    """
+
+    by: str
+    names: tuple[str, ...]
     states: tuple[Pair, ...]
+    moves: tuple[Any, Any, tuple[int, ...]]
+    behind: frozenset[str] = frozenset()
+
+    def __str__(self) -> str:
+        values = ", ".join(f"{tie.rho:g} in {name}" for name, tie in zip(self.names, self.states, strict=True))
+        copula = f"{self.states[0]}, " if isinstance(self.states[0], StudentTie) else ""
+        return f"{copula}correlation follows {self.by} ({values})"
+
+    @property
+    def shares(self) -> NDArray:
+        """The share of the time in each state."""
+        return np.bincount(self.moves[2], weights=self.moves[1], minlength=len(self.states))
 
     @property
     def rho(self) -> float:
@@ -116,7 +135,7 @@ class StateTie:
 
     def turned(self) -> StateTie:
         """As for `NormalTie`."""
-        return StateTie(self.shares, tuple([tie.turned() for tie in self.states]))
+        return replace(self, states=tuple([tie.turned() for tie in self.states]))
 
     def law_correlation(self, a: Any, b: Any) -> tuple[float, float]:
         """As for `NormalTie`."""
@@ -135,6 +154,44 @@ class StateTie:
 
     def _mean(self, numbers: Sequence[float]) -> float:
         return float(np.dot(self.shares, numbers))
+
+    # in a row of steps
+
+    def spread_of_sum(self, numbers: Sequence[float], count: int) -> float:
+        """Var of the sum, over `count` steps in a row, of a number of the state of each."""
+        p, shares, owners = self.moves
+        by_stage, left = np.take(numbers, owners), np.eye(len(owners)) - shares
+        total, decay = 0.0, np.asarray(p) - shares
+        for lag in range(count):
+            part = float((shares * by_stage) @ left @ by_stage)
+            total += part * (count if lag == 0 else 2 * (count - lag))
+            left = left @ decay if lag else decay
+            if np.abs(left).max() < FORGOTTEN:
+                break
+        return total
+
+    def signs(self, count: int) -> tuple[float, float, float]:
+        """Mean of c(t) c(t-1), c the sign of the product of both shocks; variances of its sum over `count` steps.
+
+        They are that of the sum, and that of its mean given all states. Given the state the mean of c is
+        2/pi asin(rho), under any elliptical law (Lindskog, McNeil & Schmock 2003).
+        """
+        p, shares, owners = self.moves
+        c = np.take([2.0 / np.pi * np.arcsin(tie.rho) for tie in self.states], owners)
+        before, after = ((shares * c) @ p) * c, c * (p @ c)
+        mean = float(before.sum())
+        total = count * (1.0 - mean * mean)
+        total += 2 * (count - 1) * (float((shares * c) @ p @ p @ c) - mean * mean)
+        between = count * (float((shares * c * c) @ p @ (c * c)) - mean * mean)
+        between += 2 * (count - 1) * (float(before @ after) - mean * mean)
+        row = before @ (np.asarray(p) - shares)
+        for lag in range(2, count):
+            part = float(row @ after)  # what is left of the mean of both products beside mean^2
+            total, between = (x + 2 * (count - lag) * part for x in (total, between))
+            row = row @ (np.asarray(p) - shares)
+            if np.abs(row).max() < FORGOTTEN:
+                break
+        return mean, total, between
 
 
 Tie = NormalTie | StudentTie | StateTie

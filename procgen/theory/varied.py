@@ -126,6 +126,9 @@ def part(spec: Spec, names: Iterable[str]) -> Spec:
             wanted.add(owner)
             uses = [entry for entry, _ in walk(bodies[owner].of) if entry.kind == "use"]
             left += [entry.values["name"].partition(".")[0] for entry in uses]
+        if not left:  # what the correlations of two of them follow
+            kept = spec.correlation.among(lambda name: name.partition(".")[0] in wanted)
+            left = [by for f in kept.following if (by := f.by.partition(".")[0]) not in wanted]
     return replace(
         spec,
         series=Frozen({name: one for name, one in spec.series.items() if name in wanted}),

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
 from functools import cached_property
 from itertools import combinations
@@ -14,7 +14,7 @@ from procgen.theory.axis import Axis
 from procgen.theory.expression import Expression, opaque
 from procgen.theory.series import FREQUENCIES, HORIZONS, CrossTheory, SeriesTheory, plain
 from procgen.theory.sources import GARCH, Source
-from procgen.theory.ties import NormalTie, StudentTie, Tie
+from procgen.theory.ties import NormalTie, StateTie, StudentTie, Tie
 from procgen.theory.unknown import Unknown
 
 TAIL = 0.01  # the share in which joint tails are told
@@ -121,7 +121,7 @@ class Theory(Mapping[str, SeriesTheory]):
     def _go_together(self, a: str, b: str) -> bool:
         """Whether something random is behind both series, or correlated."""
         left, right = (self.series[name].expression.sources for name in (a, b))
-        return any(self.axis.space.dependent(x, y) for x in left for y in right)
+        return self.axis.space.linked(left, right)
 
     def _cross_entry(self, a: str, b: str, at: Sequence[int]) -> dict[str, Any] | None:
         steps = np.asarray(at, np.int64)
@@ -162,15 +162,32 @@ def theory(spec: Any, graph: Any = None) -> Theory:
         for j in range(i)
         if matrix[i][j]
     }
+    ties = dict(_ties(graph))
+    correlation |= {pair: tie.rho for pair, tie in ties.items() if isinstance(tie, StateTie) and tie.rho}
     axis = Axis(spec.time.steps * graph.pace, correlation)
-    axis.space.ties = {
-        frozenset(pair): StudentTie(copula.df, correlation.get(frozenset(pair), 0.0))
-        for copula in spec.correlation.copulas
-        for pair in combinations(copula.names, 2)
-    }
+    axis.space.ties = ties
     memo: dict[int, Expression] = {}
     series = {name: SeriesTheory(name, _moments(axis, graph.series[name], memo)) for name in spec.series}
     return Theory(series, tuple(names), axis, graph)
+
+
+def _ties(graph: Any) -> Iterator[tuple[frozenset[str], Tie]]:
+    """What ties the pairs of each group that is not jointly normal."""
+    from procgen.terms.recover import sources_below
+    from procgen.terms.regimes import chain_of, states_of
+
+    for group in graph.groups:
+        if group.gaussian:
+            continue
+        for (i, a), (j, b) in combinations(enumerate(group.sources), 2):
+            rhos = [float(matrix[i, j]) for matrix in group.matrices]
+            each = tuple([NormalTie(rho) if group.df is None else StudentTie(group.df, rho) for rho in rhos])
+            tie: Tie = each[0]
+            if group.by is not None and len(set(rhos)) > 1:
+                behind = frozenset(source.name for source in sources_below(graph, group.by))
+                tie = StateTie(group.by.name, states_of(group.by), each, chain_of(group.by), behind)
+            if not isinstance(tie, NormalTie):  # which is what a pair is that no state moves
+                yield frozenset((a.name, b.name)), tie
 
 
 def _moments(axis: Axis, node: Any, memo: dict[int, Expression]) -> Any:

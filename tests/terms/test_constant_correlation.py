@@ -1,4 +1,4 @@
-"""Garch series whose shocks are correlated: constant conditional correlations, Bollerslev (1990), Rev. Econ. Stat. 72."""
+"""Garch series with correlated shocks: constant conditional correlations, Bollerslev (1990), Rev. Econ. Stat. 72."""
 
 from __future__ import annotations
 

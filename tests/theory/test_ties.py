@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from itertools import pairwise
+from itertools import pairwise, product
 
 import numpy as np
 import pytest
@@ -130,7 +130,38 @@ def test_exponentials_of_tied_normals():
 
 
 def test_a_tie_by_state_is_the_mean_of_those_of_its_states():
-    tie = StateTie((0.75, 0.25), (NormalTie(0.2), NormalTie(0.8)))
-    assert tie.rho == pytest.approx(0.35)
-    assert tie.law_correlation(NORMAL, NORMAL)[0] == pytest.approx(0.35)
-    assert tie.scores[1] == pytest.approx(1 + 2 * (0.75 * 0.04 + 0.25 * 0.64))
+    tie = by_state(0.2, 0.8)
+    assert tie.rho == pytest.approx(0.4)
+    assert tie.law_correlation(NORMAL, NORMAL)[0] == pytest.approx(0.4)
+    assert tie.scores[1] == pytest.approx(1 + 2 * (2 / 3 * 0.04 + 1 / 3 * 0.64))
+    assert tie.turned().rho == pytest.approx(-0.4)
+
+
+def by_state(first, second):
+    moves = (np.array([[0.8, 0.2], [0.4, 0.6]]), np.array([2 / 3, 1 / 3]), (0, 1))
+    return StateTie("s", ("a", "b"), (NormalTie(first), NormalTie(second)), moves)
+
+
+def test_sums_over_a_chain_against_all_chains():
+    """The variance of a sum of numbers of the state, and of signs one step apart, over all chains and all signs."""
+    tie, count = by_state(0.2, 0.8), 5
+    p, shares, _ = tie.moves
+    chains = np.array(list(product(range(2), repeat=count + 1)))
+    weights = shares[chains[:, 0]] * np.prod(p[chains[:, :-1], chains[:, 1:]], axis=1)
+    sums = np.array([3.0, -1.0])[chains[:, :count]].sum(axis=1)
+    assert tie.spread_of_sum([3.0, -1.0], count) == pytest.approx(weights @ sums**2 - (weights @ sums) ** 2, rel=1e-12)
+    means = 2 / np.pi * np.arcsin([0.2, 0.8])
+    signs = np.array(list(product([-1.0, 1.0], repeat=count + 1)))
+    given = np.prod((1 + signs[None] * means[chains][:, None]) / 2, axis=2)  # (chains, signs)
+    chances = weights @ given
+    products = (signs[:, 1:] * signs[:, :-1]).sum(axis=1)
+    mean, whole, between = tie.signs(count)
+    expected = (means[chains][:, 1:] * means[chains][:, :-1]).sum(axis=1)
+    assert between == pytest.approx(weights @ expected**2 - (weights @ expected) ** 2, rel=1e-12)
+    assert count * mean == pytest.approx(chances @ products, rel=1e-12)
+    assert whole == pytest.approx(chances @ products**2 - (chances @ products) ** 2, rel=1e-12)
+
+
+def test_signs_of_elliptical_pairs():
+    """E sign(x y) = 2/pi asin(rho) whatever the radius, by the polar integral."""
+    assert polar(4.0, 0.6, np.sign, np.sign) == pytest.approx(2 / np.pi * np.arcsin(0.6), abs=1e-8)
