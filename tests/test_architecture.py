@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import ast
 import importlib
+import subprocess
+import sys
 from pathlib import Path
 
 import pytest
@@ -58,6 +60,15 @@ def test_an_import_is_seen(source, seen):
 @pytest.mark.parametrize("file", FILES, ids=lambda f: str(f.relative_to(PACKAGE)))
 def test_a_file_can_be_read_in_one_go(file):
     assert len(file.read_text(encoding="utf-8").splitlines()) <= LONGEST
+
+
+def test_fixtures_for_pytest_stand_apart_and_need_it_only_when_one_is_made():
+    """No other file imports `procgen.testing`, and pytest is imported by a call or for its types alone."""
+    assert [f.name for f in FILES if "testing" in imported(f.read_text(encoding="utf-8"))] == []
+    users = {f.name for f in FILES if "import pytest" in f.read_text(encoding="utf-8")}
+    assert users == {"testing.py"}
+    code = "import sys, procgen.testing; sys.exit(any(name in sys.modules for name in ('pytest', 'numpy', 'pandas')))"
+    subprocess.run([sys.executable, "-c", code], check=True)
 
 
 def test_public_names_are_there_and_theory_can_be_called_whatever_was_imported_before():

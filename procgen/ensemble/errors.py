@@ -1,4 +1,4 @@
-"""The one error of this room."""
+"""The errors of this room."""
 
 from __future__ import annotations
 
@@ -7,6 +7,10 @@ import errno
 
 class EnsembleError(ValueError):
     """An ensemble that cannot be made, read or trusted; the message says why and how to mend it."""
+
+
+class InUse(EnsembleError):
+    """Another process is drawing into the folder; it may be asked again."""
 
 
 def system_sentence(error: OSError, doing: str) -> str:

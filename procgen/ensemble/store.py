@@ -18,7 +18,7 @@ from typing import Any
 
 import numpy as np
 
-from procgen.ensemble.errors import EnsembleError, system_sentence
+from procgen.ensemble.errors import EnsembleError, InUse, system_sentence
 
 MANIFEST = "manifest.json"
 PLAN = ".state/plan.json"
@@ -193,7 +193,7 @@ class Folder:
             elif time.monotonic() > give_up:
                 holder = os.pread(descriptor, 20, 0).decode("ascii", "replace")
                 os.close(descriptor)
-                raise EnsembleError(
+                raise InUse(
                     f"another render is at work in {self.path} (process {holder}); wait for it, or choose another OUT"
                 )
             os.close(descriptor)
