@@ -14,14 +14,42 @@ LEFT = -1.0  # in place of a count that is not found here
 
 
 @compiled_function
-def poisson(u, nothing, mean, climb, rare, near, out):
+def _above_poisson(k, chance, mean, found, most):
+    """The chance of more than k, from the chance of k."""
+    total, term = 0.0, chance
+    for _ in range(most):
+        k = k + 1.0
+        step = mean / k
+        term = term * step
+        total = total + term
+        if not term > found * total * (1.0 - min(step, 1.0)):
+            break
+    return total
+
+
+@compiled_function
+def _above_negative_binomial(k, chance, share, size, found, most):
+    total, term = 0.0, chance
+    for _ in range(most):
+        k = k + 1.0
+        step = (k - 1.0 + size) / k * share
+        term = term * step
+        total = total + term
+        if not term > found * total * (1.0 - min(step, 1.0)):
+            break
+    return total
+
+
+@compiled_function
+def poisson(u, nothing, mean, climb, rare, near, found, most, out):
     """The least counts that are enough for uniforms u, from the chances of none."""
     for i in range(u.shape[0]):
         wanted, chance, below, count = u[i], nothing[i], nothing[i], LEFT
         for k in range(climb):
+            more = wanted > below
             if wanted > rare and below > near:
-                break
-            if not wanted > below:
+                more = _above_poisson(float(k), chance, mean[i], found, most) > 1.0 - wanted
+            if not more:
                 count = float(k)
                 break
             chance = chance * (mean[i] / (k + 1.0))
@@ -30,14 +58,15 @@ def poisson(u, nothing, mean, climb, rare, near, out):
 
 
 @compiled_function
-def negative_binomial(u, nothing, share, ratios, climb, rare, near, out):
+def negative_binomial(u, nothing, share, size, ratios, climb, rare, near, found, most, out):
     """The same, of negative binomial counts; share: mean / (mean + size); ratios: (k - 1 + size) / k from k = 1 on."""
     for i in range(u.shape[0]):
         wanted, chance, below, count = u[i], nothing[i], nothing[i], LEFT
         for k in range(climb):
+            more = wanted > below
             if wanted > rare and below > near:
-                break
-            if not wanted > below:
+                more = _above_negative_binomial(float(k), chance, share[i], size, found, most) > 1.0 - wanted
+            if not more:
                 count = float(k)
                 break
             chance = chance * (ratios[k] * share[i])

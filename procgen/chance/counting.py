@@ -76,8 +76,12 @@ def _by_blocks(function: Callable[[Array, Array], Array], u: Array, mean: Array)
     flat, uniforms, means = out.reshape(-1), u.reshape(-1), mean.reshape(-1)
     for start in range(0, len(flat), BLOCK):
         part = slice(start, start + BLOCK)
-        sound = (means[part] >= 0.0) & (means[part] <= LARGEST)
-        counts = function(uniforms[part], np.where(sound, means[part], 0.0))
+        m = means[part]
+        if m.min() >= 0.0 and m.max() <= LARGEST:  # as a rule; not where one is nan
+            flat[part] = function(uniforms[part], m)
+            continue
+        sound = (m >= 0.0) & (m <= LARGEST)
+        counts = function(uniforms[part], np.where(sound, m, 0.0))
         flat[part] = np.where(sound, counts, np.nan)
     return out
 
@@ -106,12 +110,8 @@ def _summed(name: str, u: Array, nothing: Array, of: tuple, ratio: Ratio) -> tup
     from procgen.chance import compiled_counts
 
     out = np.empty(u.shape)
-    getattr(compiled_counts, name)(u, nothing, *of, _CLIMB, 1.0 - _RARE, 1.0 - 10.0 * _RARE, out)
-    at = np.flatnonzero(out == compiled_counts.LEFT)
-    if len(at):
-        out[at], left = _climbed(u[at], nothing[at], lambda k, i: ratio(k, at[i]))
-        at = at[left]
-    return out, at
+    getattr(compiled_counts, name)(u, nothing, *of, _CLIMB, 1.0 - _RARE, 1.0 - 10.0 * _RARE, _FOUND, _MOST_TERMS, out)
+    return out, np.flatnonzero(out == compiled_counts.LEFT)
 
 
 def _climbed(u: Array, nothing: Array, ratio: Ratio) -> tuple[Array, Array]:
@@ -134,13 +134,14 @@ def _climbed(u: Array, nothing: Array, ratio: Ratio) -> tuple[Array, Array]:
 
 def _above(k: Any, chance: Array, at: Array, ratio: Ratio) -> Array:
     """The chance of more than k, from the chance of k."""
-    total, term = np.zeros(len(at)), chance
+    total, term, adding = np.zeros(len(at)), chance, np.full(len(at), True)
     for _ in range(_MOST_TERMS):
         k = k + 1.0
         step = ratio(k, at)
         term = term * step
-        total = total + term
-        if not (term > _FOUND * total * (1.0 - np.minimum(step, 1.0))).any():
+        total = np.where(adding, total + term, total)  # each ends by itself: what stands beside it moves no bit
+        adding &= term > _FOUND * total * (1.0 - np.minimum(step, 1.0))
+        if not adding.any():
             break
     return total
 
@@ -227,7 +228,7 @@ def _negative_binomial(u: Array, mean: Array, size: float) -> Array:
     nothing = exp(-size * log1p(mean[at] / size))
     ratios = (_STEPS - 1.0 + size) / _STEPS
     out[at], left = _summed(
-        "negative_binomial", u[at], nothing, (m, ratios), lambda k, i: (k - 1.0 + size) / k * m[i]
+        "negative_binomial", u[at], nothing, (m, size, ratios), lambda k, i: (k - 1.0 + size) / k * m[i]
     )
     at = np.concatenate([at[left], np.flatnonzero(~small)])
     if len(at):

@@ -13,6 +13,7 @@ from typing import Any
 
 import numpy as np
 
+from procgen.chance.blocks import Scratch, blockwise
 from procgen.chance.counting import negative_binomial, poisson
 from procgen.chance.elementary import exp, log, log1p
 from procgen.chance.gamma import log_gamma
@@ -29,8 +30,13 @@ _LEAST = 2.0**-70  # a chance that no uniform sees, far from the likely ones
 
 def uniforms(z: Array) -> Array:
     """The uniforms that standardised ones of the law `uniform` were made of, exactly."""
-    place = np.floor(z * (GRID * _PER_ROOT_12)) + 2.0**51
-    return (np.minimum(np.maximum(place, 0.0), GRID - 1.0) + 0.5) / GRID
+    return blockwise(_uniforms, z)
+
+
+def _uniforms(z: Array, out: Array, scratch: Scratch) -> None:
+    place = np.add(np.floor(np.multiply(z, GRID * _PER_ROOT_12, out=out), out=out), 2.0**51, out=out)
+    np.minimum(np.maximum(place, 0.0, out=out), GRID - 1.0, out=out)
+    np.divide(np.add(out, 0.5, out=out), GRID, out=out)
 
 
 class Table:
@@ -48,17 +54,21 @@ class Table:
         """For each cell of equal uniforms the number that its first place gives, and whether its last gives another."""
         cells = np.arange(_CELLS, dtype=np.int64) << _SHIFT
         low = np.searchsorted(self.places, cells, side="right")
-        return low, np.searchsorted(self.places, cells + ((1 << _SHIFT) - 1), side="right") > low
+        return low.astype(np.float64), np.searchsorted(self.places, cells + ((1 << _SHIFT) - 1), side="right") > low
 
     def counts(self, u: Array) -> Array:
         """The least numbers that are enough for uniforms u, as float64: by a guide (Chen & Asau 1974) or a search."""
-        place = np.floor(u * GRID).astype(np.int64)
-        low, open_ = self.guide
-        cell = place >> _SHIFT
-        found = low[cell]
-        at = np.nonzero(open_[cell])
-        found[at] = np.searchsorted(self.places, place[at], side="right")
-        return self.first + found.astype(np.float64)
+        return blockwise(self._looked_up, u)
+
+    def _looked_up(self, u: Array, out: Array, scratch: Scratch) -> None:
+        n, (low, open_) = len(u), self.guide
+        place, cell = scratch(0, n, np.int64), scratch(1, n, np.int64)
+        np.copyto(place, np.floor(np.multiply(u, GRID, out=out), out=out), casting="unsafe")
+        np.right_shift(place, _SHIFT, out=cell)
+        at = np.flatnonzero(np.take(open_, cell, out=scratch(0, n, np.bool_), mode="clip"))
+        np.take(low, cell, out=out, mode="clip")
+        out[at] = np.searchsorted(self.places, place[at], side="right")
+        np.add(out, self.first, out=out)
 
 
 @dataclass(frozen=True)

@@ -12,7 +12,8 @@ from typing import Any
 import numpy as np
 
 from procgen.chance.streams import Stream
-from procgen.terms.base import Array, Node
+from procgen.terms.base import Array, Node, State
+from procgen.terms.burnt import burnt_together, can_burn_together
 from procgen.terms.combine import Hidden
 from procgen.terms.graph import Graph, Source
 from procgen.terms.run import Run
@@ -28,10 +29,20 @@ class PartRun(Run):
     def __init__(self, graph: Graph, first_path: int, paths: int, reveal: Sequence[str], whole: Run, kept: dict):
         super().__init__(graph, first_path, paths, reveal)
         self._whole, self._kept = whole, kept
+        self.burnt: dict[str, tuple[dict[str, Array] | None, State]] = {}  # what began for all paths at once, by node
 
     def _of_whole(self, rows: Array) -> Array:
         first = self.first_path - self._whole.first_path
         return rows[:, first : first + self.paths]
+
+    def _begin_node(self, node: Node) -> None:
+        if node.key not in self.burnt:
+            super()._begin_node(node)
+            return
+        values, _ = self.burnt[node.key]
+        for name, rows in (values or {}).items():
+            self._begun[id(node) if name == "" else (id(node), name)] = self._of_whole(rows)
+        self._states[node.key] = {}  # the whole has it
 
     def _normals(self, stream: Stream, first_step: int, steps: int) -> Array:
         if steps > FEW:
@@ -74,7 +85,7 @@ class ByPath:
         values = {name: float(row[place]) for name, row in self._rows.items()}
         return Graph(self._varied.at(values), factors=True)
 
-    def _run(self, start: int, end: int) -> Run:
+    def _run(self, start: int, end: int) -> PartRun:
         values = tuple([float(row[start]) for row in self._rows.values()])
         if values not in self._graphs:
             self._graphs[values] = self._make(start)
@@ -93,11 +104,28 @@ class ByPath:
         return found
 
     def _begin(self) -> None:
+        burning = [(node, nodes) for node, nodes in self._nodes if can_burn_together(node.term, nodes)]
+        burnt = {node.key: self._burnt(node, nodes) for node, nodes in burning}
         for run in self._runs:
+            run.burnt = burnt
             run._begin()
         for node, nodes in self._nodes:
+            if node.key in burnt:
+                self._whole._states[node.key] = burnt[node.key][1]
+                continue
             states = [run.state_of(own) for run, own in zip(self._runs, nodes, strict=True)]
             self._whole._states[node.key] = node.term.gathered(states)
+
+    def _burnt(self, node: Node, nodes: list[Node]) -> tuple[dict[str, Array] | None, State]:
+        """What a node is after the burn-ins of all paths, side by side."""
+        source = node.inputs[0]
+
+        def draw(first_step: int, steps: int) -> Array:
+            drawn: dict[int, Array] = {}
+            self._whole._draw(source, first_step, steps, drawn)
+            return drawn[id(source)]
+
+        return burnt_together(node.term, nodes, draw)
 
     def tile(self, steps: int) -> dict[str, Array]:
         """The next `steps` steps of every series: name to float64 (steps, paths)."""

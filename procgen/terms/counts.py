@@ -55,7 +55,8 @@ class Counts(Term):
         *body, z = inputs
         if not body:
             return {"": self.law().counts(uniforms(z)), "intensity": np.full((len(z), 1), float(self.mean))}
-        intensity = self.mean * exp(body[0])
+        intensity = exp(body[0])
+        np.multiply(intensity, self.mean, out=intensity)
         return {"": self.law().counts(uniforms(z), intensity), "intensity": intensity}
 
     def unranked(self):
