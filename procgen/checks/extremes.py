@@ -33,6 +33,7 @@ class Reach:
     def __init__(self, theory: Any, grain: float):
         self.theory, self.grain = theory, grain
         self._chunks: dict[int, tuple[NDArray, NDArray]] = {}
+        self._kurtosis: dict[int, float | None] = {}
 
     def farthest(self, x: NDArray, first_path: int, first_step: int, known: Sequence[Far]) -> list[Far]:
         """The KEPT farthest of those known and the values of a tile (steps, paths); what is not finite is left out."""
@@ -81,9 +82,17 @@ class Reach:
             return math.log(2.0) + float(log_ndtr(-size))
         bounds = [-2.0 * math.log(size)]
         if (self.theory.highest_moment or 0.0) > 4.0:
-            excess = self.theory.excess_kurtosis_at(-far[2])
+            excess = self._excess(-far[2])
             bounds += [] if excess is None else [math.log(max(excess, -2.0 + 1e-9) + 3.0) - 4.0 * math.log(size)]
         return min(bounds)
+
+    def _excess(self, step: int) -> float | None:
+        """Excess kurtosis at a step, found once where it is the same at all."""
+        if self.theory.excess_kurtosis is not None:
+            return self.theory.excess_kurtosis
+        if step not in self._kurtosis:
+            self._kurtosis[step] = self.theory.excess_kurtosis_at(step)
+        return self._kurtosis[step]
 
 
 def merged(found: Sequence[Far]) -> list[Far]:

@@ -76,6 +76,13 @@ def test_the_jobs_are_as_many_as_asked_for():
     assert len(set(every)) == len(every)
 
 
+def test_no_two_families_share_a_seed():
+    """Draws go by seed and names: two families with the same names and seeds would flag the same draws twice."""
+    owner = {}
+    for family, _, seeds in false_alarms.jobs(2000, ""):
+        assert all(owner.setdefault(seed, family) == family for seed in seeds)
+
+
 def test_a_tally_survives_its_line_of_json():
     tally = false_alarms.run("white noise", (1, 300), range(1, 3))
     tally.lines.append("x, mean: p 1e-05 of 9; ")

@@ -111,7 +111,8 @@ def jobs(seeds: int, only: str) -> Iterator[tuple[str, tuple[int, int], range]]:
             for k, shape in enumerate(SHAPES if only in family else ()):
                 times = 1 if large[k] else FEWER
                 for first in range(begin * times, end * times, PIECE):
-                    start = 1000 * k + 1
+                    # draws go by seed and names, which families share: each has seeds of its own
+                    start = 1_000_000 * (1 + list(FAMILIES).index(family)) + 1000 * k + 1
                     yield family, shape, range(start + first, start + min(first + PIECE, end * times))
 
 
