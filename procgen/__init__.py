@@ -5,7 +5,12 @@ import procgen as pg
 spec = pg.load("specs/cold-store.yaml")              # pg.SpecError lists every fault
 th = pg.theory(spec)                                 # th["load_kw"].variance([0, 96])
 ens = pg.render(spec, out="build/cold-store")        # or out=None: in memory
+ens["load_kw"]                                       # (paths, steps) float64; frames: ens.panel(), ens.wide("load_kw")
+for path, frame in ens.each_path(): ...              # a frame a path, without loading all
 pg.validate(ens, false_alarm=0.001)                  # .agrees, .checks, .to_html("report.html")
+pg.difference(ens, pg.render(spec.variant("heatwave")))  # which series, from which step on, and by how much
+
+`procgen.testing` has fixtures for pytest.
 """
 
 from __future__ import annotations

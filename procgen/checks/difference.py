@@ -130,6 +130,9 @@ class Difference:
         """The difference as JSON text."""
         return json.dumps(self.to_dict(), ensure_ascii=False, allow_nan=False)
 
+    def __str__(self) -> str:
+        return self.text()
+
     def __repr__(self) -> str:
         states = ", ".join(f"{one.name} {one.state}" for one in self.series)
         return f"Difference({'equal' if self.equal else f'{len(self.meaning)} in meaning'}; {states})"

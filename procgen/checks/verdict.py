@@ -191,6 +191,9 @@ class Verdict:
 
         return write_verdict(self, Path(path))
 
+    def __str__(self) -> str:
+        return self.to_text()
+
     def __repr__(self) -> str:
         return f"Verdict({self.verdict}, {', '.join(f'{n} {what}' for what, n in self.counts.items())})"
 

@@ -78,6 +78,9 @@ class DigestResult:
         as_expected = self.expected in (None, self.digest)
         return not self.damages and self.digest == self.recorded and as_expected and self.difference is None
 
+    def __str__(self) -> str:
+        return self.text()
+
     def text(self) -> str:
         """The result in a few lines."""
         lines = [str(damage) for damage in self.damages]

@@ -20,6 +20,7 @@ from procgen.ensemble.seal import contradictions, refuse_changed, refuse_version
 from procgen.ensemble.shapes import Shapes
 from procgen.ensemble.source import read_spec
 from procgen.ensemble.store import MANIFEST, PLAN, Folder, folder_path
+from procgen.spec.words import did_you_mean
 from procgen.terms.varied import Varied
 
 if TYPE_CHECKING:
@@ -40,9 +41,10 @@ def put(out: Mapping[str, np.ndarray], block: Block, values: Mapping[str, np.nda
 class Ensemble(Shapes):
     """All paths of a spec, or a range of them.
 
-    ``ens["load_kw"]`` is a (paths, steps) float64 array in the series' unit. `names` lists the columns:
-    the series of the spec, then what was revealed. `whole` is the range of paths and steps that is here;
-    paths keep their numbers, so row 0 of an array is path ``whole.first_path``.
+    ``ens["load_kw"]`` is a (paths, steps) float64 array in the series' unit, and ``for name in ens`` gives the names
+    of the columns: the series of the spec, then what was revealed. `panel`, `wide`, `nested` and `to_pandas` give
+    frames, `each_path` one path after the other. `whole` is the range of paths and steps that is here; paths keep
+    their numbers, so row 0 of an array is path ``whole.first_path``.
     """
 
     def __init__(self, columns: Sequence[Column], whole: Block, stamps: Any = None):
@@ -100,6 +102,12 @@ class Ensemble(Shapes):
     def __contains__(self, name: object) -> bool:
         return name in self.names
 
+    def __iter__(self) -> Iterator[str]:
+        return iter(self.names)
+
+    def _ipython_key_completions_(self) -> list[str]:
+        return [*self.names]
+
     def __getitem__(self, name: str) -> np.ndarray:
         """All values of a column, (paths, steps) float64; KeyError names the columns there are."""
         self.refuse_unknown(name)
@@ -120,7 +128,10 @@ class Ensemble(Shapes):
 
     def refuse_unknown(self, name: str) -> None:
         if name not in self.names:
-            raise KeyError(f"expected one of {', '.join(self.names)}, got {name!r}")
+            hint = did_you_mean(name, self.names)
+            if isinstance(name, int):
+                hint = f"path {name} alone: .paths({name}, {name + 1})"
+            raise KeyError(f"expected one of {', '.join(self.names)}, got {name!r}{hint and f'; {hint}'}")
 
     def rectangle(self, block: Block, names: Sequence[str] | None = None) -> dict[str, np.ndarray]:
         """Values (paths, steps) of a rectangle as they are stored, by column: those of these names, or all."""
@@ -171,7 +182,8 @@ class Ensemble(Shapes):
 
     def __repr__(self) -> str:
         size = bytes_text(sum(np.dtype(c.type).itemsize for c in self.columns) * self.whole.rows)
-        what = f"{self.whole.paths} paths × {self.whole.steps} steps from path {self.whole.first_path}"
+        first = f" from path {self.whole.first_path}" if self.whole.first_path else ""
+        what = f"{self.whole.paths} paths × {self.whole.steps} steps{first}"
         return f"<Ensemble of {', '.join(self.names)}: {what}, {size} of values>"
 
 

@@ -191,6 +191,12 @@ class Spec:
     written: Written | None = field(compare=False, repr=False, default=None)  # what `variant` and `set` read again
 
     @property
+    def __repr__(self) -> str:
+        head = f"{self.title}: " if self.title else ""
+        size = f"{self.paths} paths × {self.time.steps} steps"
+        variants = f", variants {', '.join(self.variants)}" if self.variants else ""
+        return f"<Spec {head}{', '.join(self.series)}; {size}, seed {self.seed}{variants}>"
+
     def variants(self) -> tuple[str, ...]:
         """The names of its variants, in the order of writing."""
         return () if self.written is None else tuple(self.written.variants)

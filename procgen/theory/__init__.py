@@ -31,6 +31,11 @@ class _Callable(ModuleType):
     """This package under its public name: `procgen.theory(spec)` is `procgen.theory.theory(spec)`."""
 
     def __call__(self, spec: object) -> Theory:
+        """The theory of every series of a spec, derived and not simulated: ``th["load_kw"].variance([0, 96])``.
+
+        `spec` is what `procgen.load` takes. Numbers that are not known are None, and `.reason(name)` says why.
+        Raises SpecError with every fault of the spec.
+        """
         return theory(spec)
 
 

@@ -37,6 +37,9 @@ class SeriesTheory:
         self.expression = expression
         self._reasons: dict[str, str] = {}
 
+    def __repr__(self) -> str:
+        return f"<SeriesTheory of {self.name}>"
+
     def mean(self, steps) -> np.ndarray | None:
         """E x at steps."""
         return self._try("mean", lambda: _mean(self.expression, steps))

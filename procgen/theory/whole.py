@@ -10,6 +10,7 @@ from typing import Any
 
 import numpy as np
 
+from procgen.spec.words import did_you_mean
 from procgen.theory.axis import Axis
 from procgen.theory.expression import Expression, opaque
 from procgen.theory.series import FREQUENCIES, HORIZONS, CrossTheory, SeriesTheory, plain
@@ -61,7 +62,8 @@ class Theory(Mapping[str, SeriesTheory]):
 
     def __getitem__(self, name: str) -> SeriesTheory:
         if name not in self.series:
-            raise KeyError(f"expected one of the series {', '.join(self.series)}, got {name!r}")
+            hint = did_you_mean(name, self.series)
+            raise KeyError(f"expected one of the series {', '.join(self.series)}, got {name!r}{hint and f'; {hint}'}")
         return self.series[name]
 
     def __iter__(self):
@@ -69,6 +71,9 @@ class Theory(Mapping[str, SeriesTheory]):
 
     def __len__(self) -> int:
         return len(self.series)
+
+    def __repr__(self) -> str:
+        return f"<Theory of {', '.join(self.series)}>"
 
     def cross(self, first: str, second: str) -> CrossTheory:
         """Covariances between two series."""
