@@ -184,7 +184,7 @@ class MixedSeries(SeriesTheory):
             raise Unknown("given its parameters the value at that step is known: its law has no density")
         return Normal(float(self._ask(node, "mean", at)[0]), variance**0.5)
 
-    @property
+    @cached_property
     def excess_kurtosis(self) -> float | None:
         def steady() -> float:
             if not self.stationarity.stationary:

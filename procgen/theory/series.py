@@ -100,7 +100,7 @@ class SeriesTheory:
         """The law at one step as a frozen SciPy distribution."""
         return self._try("marginal", lambda: laws.marginal(self.expression, int(step)))
 
-    @property
+    @cached_property
     def excess_kurtosis(self) -> float | None:
         """Excess kurtosis, the same at every step; `excess_kurtosis_at` where it changes."""
         return self._try("excess_kurtosis", lambda: fourth.steady_excess_kurtosis(self.expression, self.stationarity))
