@@ -34,7 +34,7 @@ def schema() -> Schema:
         "reuse": {"description": "a home for YAML anchors, otherwise ignored"},
         "shared": named({"anyOf": [BODY, mapping({"of": BODY}, ["of"])]}),
         "series": named({"anyOf": [BODY, mapping_of(SERIES)]}),
-        "groups": named(mapping_of((*TEMPLATE, *(p for p in SERIES if p.name not in ("of", "stream"))))),
+        "groups": named(mapping_of((*TEMPLATE, *(p for p in SERIES if p.name not in ("of", "stream", "before"))))),
         "parameters": named({"anyOf": declared()}),
         "correlation": one_or_list({"anyOf": [mapping_of(form) for form in FORMS.values()]}, 0),
         "variants": named({"type": "object", "minProperties": 1, "description": SETTINGS}),

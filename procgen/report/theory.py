@@ -80,6 +80,8 @@ def _many(count: int, what: str) -> str:
 def _series(theory: SeriesTheory, facts: dict[str, Any], unit: str | None, lags: int) -> list[str]:
     lines = [f"{theory.name}{f' ({unit})' if unit else ''}: {facts['stationarity']['verdict']}"]
     lines += _wrapped(reason for reason in facts["stationarity"]["reasons"] if not _said_below(reason, facts))
+    if "past" in facts:
+        lines += _wrapped(_past(facts["past"]))
     if "missing" in facts:
         share, gap = facts["missing"]["share"], facts["missing"]["gap"]
         text = f"{share:.4g} of its values are missing, in gaps of {gap:.4g} steps on average, whatever they are"
@@ -95,6 +97,13 @@ def _series(theory: SeriesTheory, facts: dict[str, Any], unit: str | None, lags:
     if "condition" in facts:
         lines.append(f"  condition number {facts['condition']:.2g}: expect relative errors of 1e-16 times that")
     return lines
+
+
+def _past(past: dict[str, Any]) -> Iterable[str]:
+    values, last = _many(past["values"], "value"), number(past["last"])
+    yield f"leaves from its recorded past of {values}, the last {last} at step −1; all that follows is given that past"
+    for what in past["unconditioned"]:
+        yield f"what came before could not be conditioned: {what}"
 
 
 def _memory(theory: SeriesTheory, facts: dict[str, Any]) -> list[str]:

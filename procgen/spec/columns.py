@@ -20,6 +20,8 @@ from procgen.spec.tree import Tree
 from procgen.spec.units import parse_date
 from procgen.spec.words import did_you_mean, one_of
 
+MOST_PAST = 10_000  # numbers that a series can leave from: they are filtered one by one
+
 FILE = (
     Parameter("file", "", Text(), "a CSV or Parquet file, beside the spec"),
     Parameter("column", "", Text(), "column of the values"),
@@ -44,6 +46,7 @@ class Column(Domain):
     """Numbers one a step; read as a Recorded."""
 
     structured = True
+    back = 0  # how many steps before step 0 rows may lie, beside as many as there are rows
 
     def describe(self) -> str:
         return "a list of numbers, or a column of a file such as {file: weather.csv, column: degrees, time: at}"
@@ -74,7 +77,7 @@ class Column(Domain):
         by = asked["step"] or asked["time"]
         if table is INVALID or not all(has_column(table, name, tree, reader) for name in (asked["column"], by)):
             return False
-        steps = _steps(table[by], asked["time"] is not None, tree, reader)
+        steps = _steps(table[by], asked["time"] is not None, tree, reader, self.back)
         numbers = [Real().read(Tree(value, tree.value["column"].place), reader) for value in table[asked["column"]]]
         if steps is None or INVALID in numbers:
             return False
@@ -83,10 +86,63 @@ class Column(Domain):
             double = Counter(steps).most_common(1)[0][0]
             reader.fault(tree.value["file"], f"the table has two rows for step {double}; keep one")
             return False
+        return self._put(tree, found, reader)
+
+    def _put(self, tree: Tree, found: dict[int, float], reader: Reading) -> bool:
         return _put(tree, found, reader)
 
     def schema(self) -> Schema:
         return {"anyOf": [Reals().schema(), mapping_of(FILE), mapping_of(NUMBERS)]}
+
+
+class Past(Column):
+    """What came before step 0: numbers one a step, the last of them at step −1; read as a tuple of floats."""
+
+    back = 10_000
+
+    def describe(self) -> str:
+        return (
+            "a list of numbers, the last of them at step −1, or a column of a file such as "
+            "{file: history.csv, column: load, time: at}"
+        )
+
+    def read(self, tree: Tree, reader: Reading) -> Any:
+        reader = reader.closed()  # what was recorded is the same on every path
+        if tree.is_map:
+            if "file" not in tree.value:
+                return reader.expected(tree, self.describe())
+            if not self._inlined(tree, reader):
+                return INVALID
+        numbers = Reals().read(tree, reader)
+        if numbers is not INVALID and len(numbers) > MOST_PAST:
+            what = f"at most {MOST_PAST:,} numbers before step 0"
+            reader.fault(tree, f"expected {what}, got {len(numbers):,}; keep the last ones")
+            return INVALID
+        return numbers
+
+    def _put(self, tree: Tree, found: dict[int, float], reader: Reading) -> bool:
+        """Write the numbers of the steps before step 0, which have no gap; rows from step 0 on are left out."""
+        past = {step: number for step, number in found.items() if step < 0}
+        if -1 not in past:
+            last = f"its last row before step 0 is that of step {max(past)}" if past else "all its rows lie later"
+            reader.fault(
+                tree.value["file"],
+                f"expected rows up to step −1, the one just before step 0, but {last}; add what is missing, or change "
+                "the spec's start",
+            )
+            return False
+        gap = next((step for step in range(-1, min(past), -1) if step not in past), None)
+        if gap is not None:
+            message = f"the table has nothing for step {gap}, and more before it; fill the gap, or take out older rows"
+            reader.fault(tree.value["file"], message)
+            return False
+        place = tree.value["file"].place
+        tree.value = tuple([Tree(past[step], place) for step in sorted(past)])
+        tree.keys = {}
+        return True
+
+    def schema(self) -> Schema:
+        return {"anyOf": [Reals().schema(), mapping_of(FILE)]}
 
 
 def has_column(table: dict[str, list[Any]], name: str, tree: Tree, reader: Reading) -> bool:
@@ -119,7 +175,7 @@ def _put(tree: Tree, found: dict[int, float], reader: Reading) -> bool:
     return True
 
 
-def _steps(values: list[Any], times: bool, tree: Tree, reader: Reading) -> list[int] | None:
+def _steps(values: list[Any], times: bool, tree: Tree, reader: Reading, back: int) -> list[int] | None:
     """The step of each row, or None after reporting what is none."""
     grid = reader.grid
     if not times:
@@ -133,7 +189,7 @@ def _steps(values: list[Any], times: bool, tree: Tree, reader: Reading) -> list[
     if grid.start is None:
         reader.fault(tree.value["time"], "times need time: {start: …, every: …}; give them, or match by step")
         return None
-    span = np.arange(-len(values), min(grid.steps, MOST_VALUES) + len(values))
+    span = np.arange(-len(values) - back, min(grid.steps, MOST_VALUES) + len(values))
     by_utc = dict(zip(grid.stamps(int(span[0]), len(span)).tolist(), span.tolist(), strict=True))
     clocks = grid.local(span + (grid.stamp == "end")).tolist()
     by_clock = dict(zip(clocks[::-1], span.tolist()[::-1], strict=True))  # of two that happen twice, the first

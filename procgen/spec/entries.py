@@ -13,7 +13,7 @@ from procgen.spec.varying import found_in, joint_issues, labelled, varying_in
 from procgen.spec.words import did_you_mean, unknown_key
 
 ENTRY_KEYS = ("as", "times")
-SERIES_KEYS = ("of", "unit", "type", "decimals", "stream", "note")
+SERIES_KEYS = ("of", "unit", "type", "decimals", "stream", "note", "before")
 SPREAD = ("sd", "total_sd")
 REPLACED = (*SPREAD, "law", "spread")  # what a shock says itself
 

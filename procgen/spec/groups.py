@@ -115,6 +115,10 @@ def _members(
     if "stream" in tree.value:
         reader.fault(tree.key("stream"), "the series of a group draw by their names; remove stream")
         return ()
+    if "before" in tree.value:
+        message = "what came before is that of one series; write it at a series of its own, or remove before"
+        reader.fault(tree.key("before"), message)
+        return ()
     names, table = (p.read(tree.value[p.name], reader) if p.name in tree.value else None for p in TEMPLATE[:2])
     if INVALID in (names, table) or not _told(names, table, tree, reader):
         return ()

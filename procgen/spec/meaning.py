@@ -142,7 +142,7 @@ def _with_parent(label: str, here: Mapping[str, tuple[Entry, str]], there: Mappi
 def _attributes(place: str, owner: Owner) -> Facts:
     if not isinstance(owner, Series):
         return {}
-    found = {name: getattr(owner, name) for name in ("unit", "type", "decimals", "stream")}
+    found = {name: getattr(owner, name) for name in ("unit", "type", "decimals", "stream", "before")}
     return {f"{place}.{name}": _Fact(value, shown(value)) for name, value in found.items()}
 
 

@@ -110,6 +110,7 @@ class Series:
     place: Place = field(compare=False)
     group: str | None = None
     attributes: Mapping[str, Any] = field(default_factory=Frozen)  # its row in the group's table
+    before: tuple[float, ...] | None = None  # its values up to step −1, oldest first, that it leaves from
 
 
 @dataclass(frozen=True)

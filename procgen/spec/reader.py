@@ -9,6 +9,7 @@ from pathlib import Path
 from typing import Any
 
 from procgen.spec.calendar import Grid
+from procgen.spec.columns import Past
 from procgen.spec.correlated import read_correlation
 from procgen.spec.declare import INVALID, Body, Choice, Parameter, Real, Text, Whole, read_each
 from procgen.spec.entries import SERIES_KEYS, read_body, read_name
@@ -42,6 +43,14 @@ SERIES = (
     Parameter("decimals", "", Whole(at_least=0, at_most=15), "decimals to round to", default=None),
     Parameter("stream", "", Text(), "name its draws are found by; its own when absent", default=None),
     Parameter("note", "", Text(), "free text", default=None),
+    Parameter(
+        "before",
+        "",
+        Past(),
+        "what came before step 0, one number a step up to step −1: the series leaves from there, given all of it",
+        default=None,
+        unit="series",
+    ),
 )
 
 
@@ -348,6 +357,7 @@ def _series(name: str, tree: Tree, reader: Reader) -> Series:
         stream,
         values["note"],
         tree.place,
+        before=None if values["before"] is INVALID else values["before"],
     )
 
 

@@ -1,6 +1,7 @@
 """The stochastic cycle: a turning pair of coordinates, damped and disturbed.
 
-Its two disturbances are streams of the roles `cycle` and `cycle_star`. It starts in its stationary law.
+Its two disturbances are streams of the roles `cycle` and `cycle_star`. It starts in its stationary law, or from where
+`before` says that it stood.
 """
 
 from __future__ import annotations
@@ -11,8 +12,8 @@ import numpy as np
 
 from procgen.chance.kernel import kernel
 from procgen.chance.portable import cos_turns, sin_turns
-from procgen.spec.declare import Parameter, Real, Span
-from procgen.terms.base import number, signed
+from procgen.spec.declare import Parameter, Real, Record, Span
+from procgen.terms.base import number, rows, signed, stated
 from procgen.terms.structural import Disturbed, with_outputs
 
 
@@ -43,12 +44,24 @@ class StochasticCycle(Disturbed):
         Parameter(
             "total_sd", "σ_ψ", Real(above=0), "standard deviation of the cycle itself, instead of `sd`", None, "series"
         ),
+        Parameter(
+            "before",
+            "",
+            Record(
+                Parameter("cycle", "ψ", Real(), "the cycle at step −1", unit="series"),
+                Parameter("star", "ψ*", Real(), "its other coordinate there", unit="series"),
+            ),
+            "where it stands just before step 0, to leave from there instead of the stationary law",
+            default=None,
+        ),
     )
 
     @classmethod
     def check(cls, values):
         if not values["period"] > 2:
             yield "period", f"expected a period above 2 steps, got {number(values['period'])}; a shorter one is aliased"
+        if values["before"] is not None and values["total_sd"] is not None:
+            yield "total_sd", "a cycle that leaves from `before` has no stationary spread; give `sd`"
 
     def disturbance(self):
         """Standard deviation of each disturbance."""
@@ -69,7 +82,13 @@ class StochasticCycle(Disturbed):
     def reach(self, head):
         return (0, 0)  # the past is drawn backwards, which for this cycle is the same cycle turning the other way
 
+    def past(self):
+        return None if self.before is None else 1
+
     def begin(self, before):
+        if self.before is not None:
+            state = {name: rows([self.before[name]]) for name in ("cycle", "star")}
+            return ({"": state["cycle"], "star": state["star"]} if before.head else None), state
         c, s = self.turn()
         z = before.normals(2 * max(before.head, 1))
         x, y = [self.whole() * z[0]], [self.whole() * z[1]]
@@ -92,14 +111,37 @@ class StochasticCycle(Disturbed):
         c, s = self.turn()
         phi = (2.0 * c, -self.rho * self.rho)
         part = self.sources(axis)
+        if self.before is not None:
+            return self._left(axis, part, phi)
         own = {role: axis.filtered(noise, phi, (-c,)) for role, noise in part.items()}
         late = {role: axis.filtered(noise, phi).lag(1) for role, noise in part.items()}
         star = own["cycle_star"] + late["cycle"] * -s
         return with_outputs(own["cycle"] + late["cycle_star"] * s, star=star)
 
+    def _left(self, axis, part, phi):
+        """Theory from a given past: each coordinate as it stood two steps before step 0, when no shock had come."""
+        c, s = self.turn()
+        here, there = self.before["cycle"], self.before["star"]
+        scale = self.rho * self.rho
+        past = {"cycle": ((c * here - s * there) / scale, here), "cycle_star": ((s * here + c * there) / scale, there)}
+        zero = {"before_x": (0.0, 0.0), "before_shocks": (0.0,)}
+        own = {
+            role: axis.filtered(noise, phi, (-c,), before_x=past[role], before_shocks=(0.0,))
+            for role, noise in part.items()
+        }
+        late = {  # what the other coordinate's shock of a step ago has come to
+            role: axis.filtered(noise, phi, (s,), **zero) + axis.filtered(noise, phi, (), **zero) * -1.0
+            for role, noise in part.items()
+        }
+        star = own["cycle_star"] + late["cycle"] * -1.0
+        return with_outputs(own["cycle"] + late["cycle_star"], star=star)
+
     def equation(self, *inputs):
         c, s = self.turn()
+        given = {} if self.before is None else {"ψ": self.before["cycle"], "ψ*": self.before["star"]}
+        past = "".join(f",  {stated(name, (value,))}" for name, value in given.items())
         return (
             f"ψ[t] = {number(c)} ψ[t−1] {signed(s, 'ψ*[t−1]')} + κ[t],  "
-            f"ψ*[t] = {number(-s)} ψ[t−1] {signed(c, 'ψ*[t−1]')} + κ*[t],  sd κ = sd κ* = {number(self.disturbance())}"
+            f"ψ*[t] = {number(-s)} ψ[t−1] {signed(c, 'ψ*[t−1]')} + κ*[t],  "
+            f"sd κ = sd κ* = {number(self.disturbance())}{past}"
         )

@@ -20,6 +20,7 @@ from procgen.terms.combine import Hidden, Scaled, Sum
 from procgen.terms.misfits import gaps_of, refuse_gaps, refuse_uneven
 from procgen.terms.mixing import Group, followed, groups_of
 from procgen.terms.noise import WhiteNoise
+from procgen.terms.open_start import OPEN, OpenStart
 from procgen.terms.start import JointStart
 from procgen.terms.varied import Varied
 
@@ -43,7 +44,10 @@ class Graph:
 
     def __init__(self, spec: Spec, factors: bool = False):
         """`factors`: every entry gets a node for its factor, also of 1, so that specs that differ in it are alike."""
-        self.spec, self._factors = spec, factors
+        from procgen.terms.past import leaving
+
+        (spec, self.left), self._factors = leaving(spec), factors  # `left`: what series leave from, by name
+        self.spec = spec
         self.varied: Varied | None = None  # set by `build`
         self.sources: list[Source] = []
         self.groups: list[Group] = []
@@ -168,7 +172,7 @@ class Graph:
         pace = self._paces[id(entry)]
         if entry.kind == "use":
             return self._used(entry, pace)
-        kind = catalogue()[entry.kind]
+        kind = OpenStart if entry.kind == OPEN else catalogue()[entry.kind]
         term = kind(entry.values)
         name = f"{owner}.{entry.label or entry.kind}"
         inputs: list[Any] = []
@@ -332,7 +336,10 @@ class Graph:
 
 def build(spec: Spec) -> Graph:
     """The graph of a checked spec; where parameters vary by path, with their medians, and `varied` has them all."""
+    from procgen.terms.past import refuse_varying
+
     varied = Varied(spec)
+    refuse_varying(varied.spec)
     graph = Graph(varied.typical if varied.parameters else varied.spec)
     graph.varied = varied
     return graph

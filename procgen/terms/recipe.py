@@ -8,12 +8,12 @@ values; where recipes differ, the terms that differ are those that may have move
 from __future__ import annotations
 
 from collections.abc import Hashable, Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 from procgen.spec.draws import TableDraw
 from procgen.spec.entries import children, walk
-from procgen.spec.model import Entry, Spec
+from procgen.spec.model import Entry, Frozen, Spec
 from procgen.spec.varying import PATH, Varying, replaced
 from procgen.terms import catalogue
 from procgen.terms.graph import Graph, build
@@ -61,10 +61,11 @@ class _Kitchen:
     """Follows what a series needs, each term once."""
 
     def __init__(self, spec: Spec) -> None:
-        self.spec = spec
         self.graph: Graph = build(spec)
+        left = {name: self.graph.spec.series[name] for name in self.graph.left}
+        self.spec = replace(spec, series=Frozen({**spec.series, **left})) if left else spec
         self.drawn = {(s.stream.name, s.stream.label) for s in self.graph.sources}
-        owners: dict[str, Any] = {**spec.shared, **spec.series}
+        owners: dict[str, Any] = {**self.spec.shared, **self.spec.series}
         self.entries: dict[str, dict[str, Entry]] = {name: {} for name in owners}
         for name, owner in owners.items():
             for entry, _ in walk(owner.of):

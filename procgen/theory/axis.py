@@ -17,6 +17,7 @@ from procgen.theory.fractional import Filtered, FractionalNoise, GaussianNoise, 
 from procgen.theory.known import Known
 from procgen.theory.lattice import Rounded
 from procgen.theory.laws import is_gaussian
+from procgen.theory.left import LeftOpen
 from procgen.theory.linear import At, Base, Linear
 from procgen.theory.parallel import ParallelGarch
 from procgen.theory.processes import Chain, Curved, Held, Hinged, Process, Seen, mean_at
@@ -265,6 +266,11 @@ class Axis(Volatile, Stating):
         self._processes.append(source)
         form = Linear({At(self._base(source, (), False), 0): 1.0})
         return Expression(self.space, mean or known.constant(0.0), form, lumpy=process.lumpy or process.discrete)
+
+    def left_open(self, key: str, law: Any, transition: Any, loading: Any, row: Any) -> Expression:
+        """c A^t L z of normals z drawn once a path from the stream `key`, given A, L and c."""
+        normals = self.source(key, law, 1.0)
+        return self.process(LeftOpen(self.name, (normals,), transition, loading, row, self.horizon))
 
     def product(self, expressions: Sequence[Expression]) -> Expression:
         """The product of series."""

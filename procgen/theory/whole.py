@@ -110,6 +110,7 @@ class Theory(Mapping[str, SeriesTheory]):
         series = {name: theory.as_dict(at, lags, frequencies, horizons) for name, theory in self.series.items()}
         for name, told in series.items():
             told.update(self._missing(name))
+            told.update(self._left(name))
         cross = [entry for a, b in combinations(self.series, 2) if (entry := self._cross_entry(a, b, at))]
         return {"series": series, "cross": cross, "correlation": [pair.as_dict() for pair in self.correlated]}
 
@@ -122,6 +123,13 @@ class Theory(Mapping[str, SeriesTheory]):
             return {}
         gap = found.term.gap or 1.0 / (1.0 - found.term.share)
         return {"missing": {"share": found.term.share, "gap": gap}}
+
+    def _left(self, name: str) -> dict[str, Any]:
+        """The recorded past that a series leaves from, and what could not be conditioned on it; nothing without one."""
+        left = None if self.graph is None else self.graph.left.get(name)
+        if left is None:
+            return {}
+        return {"past": {"values": left.count, "last": left.last, "unconditioned": list(left.unconditioned)}}
 
     def _go_together(self, a: str, b: str) -> bool:
         """Whether something random is behind both series, or correlated."""

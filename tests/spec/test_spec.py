@@ -248,7 +248,7 @@ def test_large_seeds_are_kept():
         (HEAD + "series: {x: {of: {constant: 1}, decimals: -2}}", "expected a whole number in [0, 15], got -2 "
          "(decimals: decimals to round to)", "series.x.decimals (a.yaml, line 5, column 43)"),
         (HEAD + "series: {x: {of: {constant: 1}, colour: red}}", "unknown key colour; expected one of of, unit, type, "
-         "decimals, stream, note", "series.x.colour (a.yaml, line 5, column 33)"),
+         "decimals, stream, note, before", "series.x.colour (a.yaml, line 5, column 33)"),
         (HEAD + "series: {x: {of: {constant: 1}, unit: 5}}", "expected a text, got 5; put it in quotes (unit: unit "
          "of the "
          "values, kept in the metadata of the column)", "series.x.unit (a.yaml, line 5, column 39)"),
