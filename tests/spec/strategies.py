@@ -22,6 +22,7 @@ from procgen.spec.declare import (
 )
 from procgen.spec.local import CalendarDays, EveryYear
 from procgen.spec.named import Matrices, Named, Names, Rows
+from procgen.spec.sample import Sample, Smoothing
 from procgen.terms.markov import Stays
 
 NOISE = {"white_noise": {"sd": 1}}
@@ -59,6 +60,8 @@ def valid(domain, laws):
         CalendarDays: st.just(["2027-12-24", "02-29"]),
         EveryYear: st.just("07-15"),
         Column: st.just([3, 5, 4]) | st.just({"first": -1, "numbers": [1, 2.5, 3]}),
+        Sample: st.just([3, 5, 4]) | st.just({"numbers": [1, 2.5, 3]}),
+        Smoothing: st.booleans() | st.just(0.3),
         Matrices: st.just([[0.5, 0.1], [0, 0.3]]) | st.just([[[0.5, 0], [0, 0.3]], [[0.1, 0], [0, 0.2]]]),
     }
     return simple[type(domain)]
