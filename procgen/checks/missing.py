@@ -24,15 +24,26 @@ LARGEST_STATE = 8  # elements of the state up to which a filter is run with gain
 _WHY = "values are missing"
 
 
-def taken_out(graph: Any) -> dict[str, Any]:
+def taken_out(graph: Any, spec: Any) -> dict[str, Any]:
     """The terms that leave values out, by series; in the graph, their bodies take their places."""
+    from procgen.spec.entries import walk
+    from procgen.spec.varying import found_in
     from procgen.terms.misfits import gaps_of
 
+    bodies = [(name, one.of) for part in (spec.series, spec.shared) for name, one in part.items()]
+    drawn = {
+        f"{name}.{entry.label}"
+        for name, body in bodies
+        for entry, _ in walk(body)
+        if entry.kind == "missing" and found_in(entry.values)
+    }
     found = {name: node.term for name, root in graph.series.items() if (node := gaps_of(root)) is not None}
 
     def without(node: Any) -> Any:
         return node.inputs[0] if hasattr(node, "term") and node.term.gaps else node
 
+    for term in found.values():
+        term.drawn = term.address in drawn
     if found:
         for node in graph.order():
             node.inputs = tuple([without(part) for part in node.inputs])
@@ -146,6 +157,10 @@ class GapSums(EventSums):
         super().finish(lane.sums)
 
     def checks(self, series: str) -> Iterator[Check]:
+        if self.term.drawn:
+            note = "its share or length is drawn by path: not judged"
+            yield Check(series, "share: missing", "all steps", "level", outcome="untestable", note=note)
+            return
         for row in super().checks(series):
             row.kind = "level"  # each share stands for itself
             yield row

@@ -121,7 +121,7 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
     from procgen.theory import theory
 
     graph = build(spec)
-    gaps = missing.taken_out(graph)
+    gaps = missing.taken_out(graph, spec)
     th = theory(spec, graph)
     steps = steps or spec.time.steps
     series, routes, precision = [], {}, []

@@ -120,3 +120,10 @@ def test_the_same_verdict_from_parts_by_several_processes(tmp_path):
     ens = pg.render(spec(share=0.2), out=tmp_path / "o")
     one, two = pg.validate(ens, workers=1), pg.validate(ens, workers=2)
     assert one.checks.equals(two.checks)
+
+
+def test_a_share_drawn_by_path_is_not_judged_as_one_share():
+    share = {"draw": {"uniform": [0.1, 0.3]}, "over": "path"}
+    body = {"x": [{"missing": {"of": AR, "share": share}}]}
+    verdict = pg.validate(pg.render(HEAD | {"series": body}), false_alarm=1e-8)
+    assert verdict.agrees and "its share or length is drawn by path: not judged" in verdict.to_text()
