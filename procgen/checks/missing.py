@@ -43,7 +43,7 @@ def taken_out(graph: Any, spec: Any) -> dict[str, Any]:
         return node.inputs[0] if hasattr(node, "term") and node.term.gaps else node
 
     for term in found.values():
-        term.drawn = term.address in drawn
+        term.drawn = term.address in drawn  # type: ignore[attr-defined]
     if found:
         for node in graph.order():
             node.inputs = tuple([without(part) for part in node.inputs])

@@ -55,12 +55,17 @@ class Rounded(Process):
         (m, u), (n, v) = self.shape(t), other.shape(s)
         c = at_any(self.body, other.body, t, s) / (self.to * other.to)
         c = np.clip(c, -u * v, u * v)
+        # Of a series that is stationary most are alike: each is computed once.
+        cases, which = np.unique(np.stack([x.ravel() for x in (m, u, n, v, c)]), axis=1, return_inverse=True)
+        return self.to * other.to * self._of_cases(other, *cases)[which.ravel()].reshape(t.shape)
+
+    def _of_cases(self, other: Rounded, m, u, n, v, c) -> np.ndarray:
         fine = (np.minimum(u, v) >= 1.0) & (self.to == other.to)
-        out = np.zeros(t.shape)
+        out = np.zeros(c.shape)
         for chosen, way in ((fine, _by_waves), (~fine & (u * v > 0.0), _by_borders)):
             if chosen.any():
                 out[chosen] = way(self.name, m[chosen], u[chosen], n[chosen], v[chosen], c[chosen])
-        return self.to * other.to * out
+        return out
 
     def with_expression(self, other, t, s):
         from procgen.theory.laws import jointly_gaussian
