@@ -95,8 +95,18 @@ class Column(Domain):
         return {"anyOf": [Reals().schema(), mapping_of(FILE), mapping_of(NUMBERS)]}
 
 
+PAST = (
+    Parameter("numbers", "", Reals(), "the numbers, one a step, oldest first"),
+    Parameter("since", "", Text(), "time of the first of them"),
+    Parameter("until", "", Text(), "time of the last of them, at step −1 or later: what is later is left out"),
+)
+
+
 class Past(Column):
-    """What came before step 0: numbers one a step, the last of them at step −1; read as a tuple of floats."""
+    """What came before step 0: numbers one a step, the last of them at step −1; read as a tuple of floats.
+
+    Numbers of a file with times go into the spec with their times, so that another start or step is noticed.
+    """
 
     back = 10_000
 
@@ -108,12 +118,12 @@ class Past(Column):
 
     def read(self, tree: Tree, reader: Reading) -> Any:
         reader = reader.closed()  # what was recorded is the same on every path
-        if tree.is_map:
+        if tree.is_map and "until" not in tree.value:
             if "file" not in tree.value:
                 return reader.expected(tree, self.describe())
             if not self._inlined(tree, reader):
                 return INVALID
-        numbers = Reals().read(tree, reader)
+        numbers = self._cut(tree, reader) if tree.is_map else Reals().read(tree, reader)
         if numbers is not INVALID and len(numbers) > MOST_PAST:
             what = f"at most {MOST_PAST:,} numbers before step 0"
             reader.fault(tree, f"expected {what}, got {len(numbers):,}; keep the last ones")
@@ -136,13 +146,45 @@ class Past(Column):
             message = f"the table has nothing for step {gap}, and more before it; fill the gap, or take out older rows"
             reader.fault(tree.value["file"], message)
             return False
-        place = tree.value["file"].place
-        tree.value = tuple([Tree(past[step], place) for step in sorted(past)])
-        tree.keys = {}
+        place, timed = tree.value["file"].place, "time" in tree.value and reader.grid is not None
+        numbers = tuple([Tree(past[step], place) for step in sorted(past)])
+        tree.value, tree.keys = numbers, {}
+        if timed:
+            ends = {"since": _time_of(min(past), reader), "until": _time_of(-1, reader)}
+            tree.value = {"numbers": Tree(numbers, place)} | {key: Tree(end, place) for key, end in ends.items()}
         return True
 
+    def _cut(self, tree: Tree, reader: Reading) -> Any:
+        """The numbers up to step −1 of those up to a time; INVALID after reporting that they end before it."""
+        before = len(reader.faults)
+        values = read_each(tree, PAST, reader)
+        if len(reader.faults) > before or reader.grid is None:
+            return INVALID
+        numbers, ends = values["numbers"], [parse_date(values[key]) for key in ("since", "until")]
+        if None in ends or reader.grid.start is None:
+            return reader.expected(tree, "since and until as dates and times, and a spec whose time has a start")
+        first, last = (round(end.replace(tzinfo=end.tzinfo or UTC).timestamp() * 1e6) for end in ends if end)
+        stamps = reader.grid.stamps(-len(numbers), 2 * len(numbers)).tolist()
+        if first in stamps and last in stamps[stamps.index(first) :]:
+            begin, end = stamps.index(first), stamps.index(last) + 1
+            if begin + len(numbers) == end >= len(numbers):
+                return numbers[: len(numbers) - begin]
+        reader.fault(
+            tree,
+            f"expected {len(numbers)} numbers on the steps of the spec, up to step −1 at {_time_of(-1, reader)} or "
+            f"later, got them from {values['since']} to {values['until']}; change the spec's start or step, or give "
+            "other numbers",
+        )
+        return INVALID
+
     def schema(self) -> Schema:
-        return {"anyOf": [Reals().schema(), mapping_of(FILE)]}
+        return {"anyOf": [Reals().schema(), mapping_of(FILE), mapping_of(PAST)]}
+
+
+def _time_of(step: int, reader: Reading) -> str:
+    """The time of a step in UTC, as a spec would have it."""
+    assert reader.grid is not None
+    return datetime.fromtimestamp(reader.grid.stamps(step, 1).tolist()[0] / 1e6, UTC).isoformat()
 
 
 def has_column(table: dict[str, list[Any]], name: str, tree: Tree, reader: Reading) -> bool:

@@ -242,8 +242,8 @@ def _tied(spec: Spec, name: str) -> Iterator[str]:
     others = [names[j] for i in own for j in range(len(names)) if j not in own and matrix[i][j] != 0.0]
     if others:
         yield (
-            f"on the pasts of {', '.join(dict.fromkeys(others))}, whose shocks are correlated with its own: each series "
-            "is conditioned on its own past alone, and shocks are correlated from step 0 on"
+            f"on the pasts of {', '.join(dict.fromkeys(others))}, whose shocks are correlated with its own: each "
+            "series is conditioned on its own past alone, and shocks are correlated from step 0 on"
         )
 
 

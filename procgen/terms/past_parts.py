@@ -76,7 +76,7 @@ def recursion_of(term: Any) -> Recursion | None:
         return Recursion(term.phi, term.theta, (), lambda steps: np.zeros(np.shape(steps)))
     if isinstance(term, RandomWalk):
         return Recursion((), (), (1.0,), lambda steps: term.drift * np.asarray(steps, np.float64))
-    if isinstance(term, Integrated):
+    if isinstance(term, Integrated) and term.even:
         return Recursion(term.core.phi, term.core.theta, term.delta, lambda steps: term.path(steps, drifting=True))
     return None
 
@@ -93,7 +93,7 @@ def is_gaussian(node: Node) -> bool:
 def part_of(entry: Entry, node: Node) -> Part | None:
     """An entry with its node (behind its factor) as a part; None where it is no Gaussian linear one."""
     term = node.term
-    if not is_gaussian(node):
+    if not is_gaussian(node) or getattr(term, "timed", False):  # steps of their own lengths
         return None
     if isinstance(term, WhiteNoise):
         nothing = np.zeros((0, 0))

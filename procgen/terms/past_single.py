@@ -31,10 +31,10 @@ def single(entry: Entry, node: Node, x: Array) -> Told | Unknown:
     recursion = recursion_of(node.term)
     if recursion is None:
         return Unknown(f"{node.term.kind} cannot be told where it stands; remove before at the series")
-    x_less = x - recursion.path(np.arange(-len(x), 0))
-    needs, found = len(recursion.phi) + len(recursion.delta), _shocks(recursion, x_less)
+    needs = len(recursion.phi) + len(recursion.delta)
     if len(x) < needs:
         return Unknown(f"expected at least {needs} values before step 0 (one a lag), got {len(x)}; add earlier ones")
+    found = _shocks(recursion, x - recursion.path(np.arange(-len(x), 0)))
     if isinstance(found, Unknown):
         return found
     left = told_before(entry, x, found[len(found) - len(recursion.theta) :])
@@ -58,8 +58,8 @@ def _shocks(recursion: Recursion, x: Array) -> Array | Unknown:
     if q and len(w) < skip + q:
         needs = skip + q + len(recursion.delta)
         return Unknown(
-            f"its shocks are not normal: expected at least {needs:,} values before step 0 to tell them, got {len(x):,}; "
-            "add earlier ones, or give it a `before` of its own"
+            f"its shocks are not normal: expected at least {needs:,} values before step 0 to tell them, got {len(x):,}"
+            "; add earlier ones, or give it a `before` of its own"
         )
     a = np.zeros((q + len(w), 1))
     inversion(np.array(recursion.phi), np.array(recursion.theta), np.concatenate([np.zeros((p, 1)), w[:, None]]), a)

@@ -13,6 +13,7 @@ _T = {"student_t": {"df": 6}}
 _SAMPLE = [4.1, 0.3, 2.2, 7.5, 2.2, 1.8, 3.3, 0.9, 12.4, 5.0, 2.7, 1.1]
 _REPEAT = {"after": "repeat"}
 _RECORD = [3.1, 5.2, 4.7, 6.3, 2.8, 5.9, 7.4, 6.6, 4.2, 3.9, 5.5, 8.1, 6.4, 5.8, 4.6, 3.3, 2.1, 4.4]
+_GARCH = {"sd": 1, "alpha": 0.1, "beta": 0.8}
 _AR = [{"ar": {"phi": 0.6, "sd": 1}}]
 
 FAMILIES: Mapping[str, Any] = {
@@ -330,6 +331,13 @@ FAMILIES: Mapping[str, Any] = {
             "c": [{"inar": {"alpha": 0.6, "mean": 5}}],
             "d": [{"zero_inflated": {"of": [{"poisson": {"mean": 4}}], "share": 0.3}}],
             "e": [{"intermittent": {"share": 0.2, "stay": 3, "size": 12, "sd": 6}}],
+        }
+    },
+    "left": {
+        "series": {
+            "x": {"of": [{"random_walk": {"sd": 0.5}}, {"ar": {"phi": 0.6, "sd": 1}}], "before": _RECORD},
+            "y": {"of": [{"ar": {"phi": 0.6, "shock": {"garch": _GARCH}}}], "before": [0.4, -0.3]},
+            "z": {"of": [{"arma": {"phi": 0.5, "theta": 0.4, "sd": 1}}], "before": [0.3, -1.2]},
         }
     },
 }

@@ -1,0 +1,172 @@
+"""What came before step 0 at a series: read from a file or a list, and refused where it does not fit, in words."""
+
+import re
+
+import numpy as np
+import pandas as pd
+import pytest
+import yaml
+
+import procgen as pg
+
+AR = {"ar": {"phi": 0.5, "sd": 1}}
+HEAD = {"procgen": 1, "seed": 5, "paths": 3, "time": {"steps": 4}}
+DAILY = {"start": "2027-03-10", "every": "1d", "steps": 4}
+FILE = {"file": "h.csv", "column": "load"}
+
+
+def spec_file(folder, before, time=None, of=AR, **more):
+    raw = {**HEAD, "time": time or HEAD["time"], "series": {"x": {"of": of, "before": before}}, **more}
+    (folder / "s.yaml").write_text(yaml.safe_dump(raw), encoding="utf-8")
+    return folder / "s.yaml"
+
+
+def days(first, count):
+    dates = pd.date_range(first, periods=count, freq="D")
+    return pd.DataFrame({"day": dates.strftime("%Y-%m-%d"), "load": np.arange(1.0, count + 1)})
+
+
+def faults(given):
+    with pytest.raises(pg.SpecError) as error:
+        pg.theory(pg.load(given))
+    return [fault.message for fault in error.value.faults]
+
+
+@pytest.mark.parametrize("suffix", ["csv", "parquet"])
+def test_a_file_is_read_up_to_the_step_before_step_0_whatever_its_order(tmp_path, suffix):
+    table = days("2027-03-01", 12).sample(frac=1, random_state=1)  # its last rows lie at steps 0 to 2
+    getattr(table, f"to_{suffix}")(tmp_path / f"h.{suffix}", index=False)
+    spec = pg.load(spec_file(tmp_path, {**FILE, "file": f"h.{suffix}", "time": "day"}, DAILY))
+    assert spec.series["x"].before == tuple(range(1, 10))
+    assert pg.theory(spec)["x"].mean([0]) == pytest.approx(4.5)
+    assert pg.load(spec.raw).digest() == spec.digest()  # it needs the file no more
+
+
+def test_a_file_by_step_is_as_the_list(tmp_path):
+    pd.DataFrame({"step": [-3, -2, -1, 0], "load": [7.0, 8.5, 9.0, 1.0]}).to_csv(tmp_path / "h.csv", index=False)
+    spec = pg.load(spec_file(tmp_path, {**FILE, "step": "step"}))
+    listed = pg.load(spec_file(tmp_path, [7, 8.5, 9]))
+    assert spec.digest() == listed.digest()
+    assert spec.digest() != pg.load(spec_file(tmp_path, [7, 8.5, 9.5])).digest()
+
+
+def test_another_start_reads_the_record_up_to_it_or_says_that_it_ends_before(tmp_path):
+    days("2027-03-01", 12).to_csv(tmp_path / "h.csv", index=False)
+    spec = pg.load(spec_file(tmp_path, {**FILE, "time": "day"}, DAILY))
+    assert spec.set({"time.start": "2027-03-08"}).series["x"].before == tuple(range(1, 8))
+    for place, value in (("time.start", "2027-03-11"), ("time.every", "12h"), ("time.start", "2027-02-01")):
+        with pytest.raises(pg.SpecError, match="expected 9 numbers on the steps of the spec, up to step −1 at 2027"):
+            spec.set({place: value})
+    assert spec.set({"series.x.before": [1, 2]}).series["x"].before == (1.0, 2.0)
+    assert spec.set({"series.x.before": None}).series["x"].before is None
+
+
+def without(table, *rows):
+    return table.drop(index=list(rows))
+
+
+@pytest.mark.parametrize(
+    ("table", "message"),
+    [
+        (days("2027-02-20", 10), r"expected rows up to step −1, .* its last row before step 0 is that of step -9; add"),
+        (days("2027-03-10", 3), r"expected rows up to step −1, .* all its rows lie later; add what is missing"),
+        (without(days("2027-03-01", 9), 4), r"the table has nothing for step -5, and more before it; fill the gap"),
+        (days("2027-03-01", 9).replace(5.0, np.nan), r'expected a number, got ""'),
+        (days("2027-03-01", 9).replace("2027-03-05", "2027-03-05T11:00"), r"no step is at 2027-03-05T11:00; take that"),
+        (pd.concat([days("2027-03-01", 9)] * 2), r"the table has two rows for step -9; keep one"),
+        (days("2027-03-01", 9).rename(columns={"load": "lode"}), r"the table has no column load; .* did you mean lode"),
+        (days("2027-03-01", 9).replace("2027-03-05", "last friday"), r"expected a date, or a date and time, in column"),
+    ],
+)
+def test_records_that_do_not_fit(tmp_path, table, message):
+    table.to_csv(tmp_path / "h.csv", index=False)
+    (said,) = faults(spec_file(tmp_path, {**FILE, "time": "day"}, DAILY))
+    assert re.search(message, said)
+
+
+@pytest.mark.parametrize(
+    ("before", "message"),
+    [
+        ({"column": "load"}, r"expected a list of numbers, the last of them at step −1, or a column of a file such as"),
+        ([], r"expected a number, or a list of such numbers, got an empty list"),
+        ([1, "two"], r'expected a number, got "two"'),
+        ([1.0] * 10_001, r"expected at most 10,000 numbers before step 0, got 10,001; keep the last ones"),
+        ({**FILE, "time": "day"}, r"times need time: \{start"),
+    ],
+)
+def test_other_ways_to_write_it_wrong(tmp_path, before, message):
+    days("2027-03-01", 9).to_csv(tmp_path / "h.csv", index=False)
+    (said,) = faults(spec_file(tmp_path, before))
+    assert re.search(message, said)
+
+
+PAST = [3.0, 1.0, 4.0, 1.0, 5.0, 9.0, 2.0, 6.0]
+
+
+@pytest.mark.parametrize(
+    ("of", "message"),
+    [
+        ([{"constant": 3}], r"nothing in x is random, so its past changes nothing; remove before"),
+        ([{"ar": {"phi": 0.5, "sd": 1, "before": {"x": [1]}}}], r"x.ar \(ar\) has a `before` of its own, .* one"),
+        ([{"exp": [AR]}], r"x.exp cannot leave from the past of x: exp cannot be told where it stands; remove before"),
+        ([{"poisson": {"mean": 3}}], r"x.poisson cannot leave from the past of x: poisson cannot be told"),
+        (
+            [AR, {"random_walk": {"sd": 1, "law": "laplace"}}],
+            r"the past of x does not tell its parts apart: expected normal shocks and linear .* got x.random_walk",
+        ),
+        ([AR, {"garch": {"sd": 1, "alpha": 0.1, "beta": 0.8}}], r"parts apart: .* got x.garch \(garch\); leave before"),
+        ([AR, {"integrate": [{"ma": {"theta": 0.5, "sd": 1}}]}], r"parts apart: .* got x.integrate \(integrate\)"),
+        ([{"use": "both"}, {"white_noise": {"sd": 1}}], r"what x uses has a state that others may see; write its"),
+        ([{**AR, "times": 0}], r"x.ar \(ar\) is multiplied by 0, and its past is lost; take it out"),
+        (
+            [{"seasonal_random_walk": {"period": 9, "sd": 1}}, AR],
+            r"expected at least 9 values before step 0 to tell where the parts of x stand, got 8; add earlier ones",
+        ),
+        (
+            [{"seasonal_random_walk": {"period": 9, "sd": 1, "law": "laplace"}}],
+            r"expected at least 9 values before step 0 \(one a lag\), got 8; add earlier ones",
+        ),
+        (
+            [{"ar": {"phi": {"draw": {"uniform": [0, 0.9]}, "over": "path"}, "sd": 1}}],
+            r"phi is drawn by path in x, which leaves from its recorded past: expected numbers there",
+        ),
+    ],
+)
+def test_terms_that_cannot_be_conditioned(tmp_path, of, message):
+    (said,) = faults(spec_file(tmp_path, PAST, of=of, shared={"both": [AR]}))
+    assert re.search(message, said), said
+
+
+def test_a_group_has_no_past(tmp_path):
+    more = {"groups": {"g": {"names": ["a", "b"], "of": [AR], "before": [1, 2]}}}
+    (said,) = faults(spec_file(tmp_path, PAST, **more))
+    assert said == "what came before is that of one series; write it at a series of its own, or remove before"
+
+
+def told(tmp_path, of, before=PAST, **more):
+    theory = pg.theory(pg.load(spec_file(tmp_path, before, of=of, **more)))
+    return theory.as_dict([0])["series"]["x"]["past"]
+
+
+def test_theory_says_what_it_leaves_from_and_what_could_not_be_conditioned(tmp_path, capsys):
+    assert told(tmp_path, [AR]) == {"values": 8, "last": 6.0, "unconditioned": []}
+    (said,) = told(tmp_path, [{"garch": {"sd": 1, "alpha": 0.1, "beta": 0.8}}])["unconditioned"]
+    assert said.startswith("the variance of x.garch before the record: it is begun at its mean there, and the 8 shocks")
+    tied = {"correlation": [{"between": ["x.ar", "y.ar"], "value": 0.5}]}
+    raw = yaml.safe_load(spec_file(tmp_path, PAST).read_text(encoding="utf-8"))
+    raw = {**raw, "series": {**raw["series"], "y": [AR]}, **tied}
+    (said,) = pg.theory(raw).as_dict([0])["series"]["x"]["past"]["unconditioned"]
+    assert said.startswith("on the pasts of y.ar, whose shocks are correlated with its own")
+
+    from procgen.report.theory import theory_text
+
+    text = theory_text(pg.load(raw), pg.theory(raw), [0], 3)
+    assert "leaves from its recorded past of 8 values, the last 6 at step −1" in text
+    assert "what came before could not be conditioned: on the pasts of y.ar" in text
+    assert "x: settles from its given start" in text
+
+
+def test_a_part_by_itself_is_said_to_be_one(tmp_path):
+    more = {"series": {"x": {"of": [AR, {"white_noise": {"sd": 1}}], "before": PAST}, "y": [{"use": "x.ar"}]}}
+    (said,) = pg.theory({**HEAD, **more}).as_dict([0])["series"]["x"]["past"]["unconditioned"]
+    assert said.startswith("x.ar by itself: a part runs from the mean of where it may stand")
