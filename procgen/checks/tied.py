@@ -37,7 +37,8 @@ class TiedSums(CrossSums):
 
     def absorb(self, a: NDArray, b: NDArray, steps: int, ready: int, totals: NDArray) -> None:
         super().absorb(a, b, steps, ready, totals)
-        first = max(steps - len(a), ready, 0)  # of the new steps, those whose scores are held and settled
+        held = min(len(a), len(b))  # one of two ways to the shocks may have settled later
+        first = max(steps - held, ready, 0)  # of the new steps, those whose scores are held and settled
         if first >= steps:
             return
         from scipy.special import ndtri
@@ -47,7 +48,7 @@ class TiedSums(CrossSums):
         far = ((x > end) & (y > end)) | ((x < -end) & (y < -end))
         both = np.isfinite(x) & np.isfinite(y)
         self.sums[_TAILS][:2] += np.array([np.count_nonzero(both), np.count_nonzero(far)])  # type: ignore[index]
-        new = min(steps, steps - ready - 1, len(a) - 1)
+        new = min(steps, steps - ready - 1, held - 1)
         if self.lasting and new > 0:
             products = np.sign(a[len(a) - new - 1 :] * b[len(b) - new - 1 :])
             pairs = products[1:] * products[:-1]

@@ -55,6 +55,18 @@ def test_sums_are_merged_and_cut_alike():
     assert between(whole).estimate[TAILS] == between(pg.validate(data, spec(paths=96, steps=200))).estimate[TAILS]
 
 
+def test_ways_to_the_shocks_may_settle_at_steps_far_apart():
+    """garch of other decays: what came before step 0 is forgotten sooner by one; only steps that both know count."""
+    series = {
+        "x": [{"garch": {"sd": 1, "alpha": 0.1, "beta": 0.8}}],
+        "y": [{"garch": {"sd": 1, "alpha": 0.05, "beta": 0.92}}],
+    }
+    item = {"between": ["x.garch", "y.garch"], "value": 0.5, "copula": T4}
+    verdict = pg.validate(pg.render(spec(series=series, paths=100, steps=600, correlation=[item])), false_alarm=1e-7)
+    rows = between(verdict)
+    assert verdict.agrees and rows.p[TAILS] > 1e-6 and rows.p[SCORES] > 1e-6
+
+
 def test_a_sum_of_several_shocks_is_not_judged_by_their_scores():
     series = {"x": [{"ar": {"phi": 0.6, "sd": 1}}, {"random_walk": {"sd": 1}}], "y": [{"white_noise": {"sd": 2}}]}
     verdict = pg.validate(pg.render(spec(series=series, paths=200, steps=100)), false_alarm=1e-7)
