@@ -86,11 +86,27 @@ class Grid:
         """
         if self.start is None or self.every is None:
             raise ValueError("these steps have no stamps: the spec's time has no start")
-        first = first_step + (self.stamp == "end")
-        steps = np.arange(first, first + count, dtype=np.int64)
+        return self.moments(np.arange(first_step, first_step + count, dtype=np.int64))
+
+    def moments(self, steps: np.ndarray) -> np.ndarray:
+        """Return the stamps of any steps: int64, µs of UTC since 1970; needs a start."""
+        assert self.start is not None and self.every is not None
+        steps = np.asarray(steps, np.int64) + (self.stamp == "end")
         if self.every[1] in ABSOLUTE:
             return steps * self._length + self._utc(self.start)
         return self._calendar_utc(self._local(steps))
+
+    @property
+    def mean_length(self) -> int:
+        """The length of a step in µs: on average, where steps differ in length."""
+        return self._length
+
+    @property
+    def even(self) -> bool:
+        """Whether all steps are known to have one length; also where none is given."""
+        if self.every is None:
+            return not self.uneven
+        return self.every[1] in ABSOLUTE or (self.every[1] in DAYS and self.zone is None)
 
     def local(self, steps: np.ndarray) -> np.ndarray:
         """Return the local clock where steps begin: int64 microseconds since 1970-01-01T00:00 by that clock.

@@ -41,6 +41,7 @@ class Integrated(Term):
     delta: tuple[float, ...] = ()
     known: tuple[float, ...] = ()
     level: float = 0.0
+    even: bool = True  # whether the recursion is the same at all steps
 
     def shock_sd(self):
         return self.sd

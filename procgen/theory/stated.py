@@ -11,13 +11,14 @@ import numpy as np
 from procgen.theory import known, markov
 from procgen.theory.bootstrap import Blocks
 from procgen.theory.counted import Centred, Compound, Inflated
+from procgen.theory.elapsed import Pulled, forecast
 from procgen.theory.expression import Expression, product
 from procgen.theory.known import Known
 from procgen.theory.linear import At, Linear, base_of
 from procgen.theory.processes import Held, Process, alone, at_any, mean_at
 from procgen.theory.sources import Space
 from procgen.theory.unknown import Unknown
-from procgen.theory.verdict import CYCLES, GROWS, VARIES, judge
+from procgen.theory.verdict import CYCLES, GROWS, LEAVES, VARIES, judge
 
 Steps = np.ndarray
 Covariance = Callable[[Steps, Steps], np.ndarray]
@@ -222,6 +223,19 @@ class Stating:
         else:
             path = known.constant(float(mean))
         return self.process(Stated(self.name, (self.source(key, driver, 1.0),), covariance, **more), path)
+
+    def pulled(self, noise: Expression, rate: float, clock: Any, past: float | None) -> Expression:
+        """x(t) = e^(-rate D) x(t-1) + r(D) a(t) over steps of the lengths D that a clock tells, stationary.
+
+        r(D)^2 = (1 - e^(-2 rate D)) / (1 - e^(-2 rate)), a(t) the normal shock of a step of length 1. With `past` it
+        leaves from this value at step -1.
+        """
+        path = known.constant(0.0)
+        if past:
+            note = f"{self.name} {LEAVES}"
+            key = ("pulled", self.name, rate, past)
+            path = known.whole(key, lambda t: forecast(rate, clock, past, t), note=note, settles=True)
+        return self.process(Pulled(self.name, noise, rate, clock, past is not None), path)
 
     def drawn(
         self,

@@ -3,8 +3,8 @@
 Weak stationarity speaks of mean and autocovariances, strict stationarity of all laws; a conditionally
 heteroskedastic series can be both. A verdict is the first that applies of
 
-    infinite variance, variance grows, variance not constant, settles from its given start,
-    mean not constant, cyclostationary, weakly stationary, strictly stationary
+    infinite variance, variance grows, variance not constant, autocovariance not constant,
+    settles from its given start, mean not constant, cyclostationary, weakly stationary, strictly stationary
 
 and its reasons name every term that contributes.
 """
@@ -27,12 +27,13 @@ from procgen.theory.unknown import Unknown
 INFINITE = "infinite variance"
 GROWS = "variance grows"
 VARIES = "variance not constant"
+MEMORY = "autocovariance not constant"
 SETTLES = "settles from its given start"
 MEAN = "mean not constant"
 CYCLES = "cyclostationary"
 WEAK = "weakly stationary"
 STRICT = "strictly stationary"
-ORDER = (INFINITE, GROWS, VARIES, SETTLES, MEAN, CYCLES, WEAK, STRICT)
+ORDER = (INFINITE, GROWS, VARIES, MEMORY, SETTLES, MEAN, CYCLES, WEAK, STRICT)
 LEAVES = "leaves from a given past and forgets it"
 LEAVES_VARIANCE = "leaves from a given variance and forgets it"
 UNIT_ROOT = 1e-9  # a root nearer to the unit circle than this counts as on it

@@ -340,6 +340,14 @@ FAMILIES: Mapping[str, Any] = {
             "z": {"of": [{"arma": {"phi": 0.5, "theta": 0.4, "sd": 1}}], "before": [0.3, -1.2]},
         }
     },
+    "uneven steps": {
+        "time": {"start": "2027-01-29", "every": "1 business day", "holidays": ["2027-02-03", "2027-02-08"]},
+        "series": {
+            "x": [{"ornstein_uhlenbeck": {"rate": 0.2, "mean": 3, "sd": 0.2, "clock": "time"}}],
+            "y": [{"ornstein_uhlenbeck": {"rate": 0.6, "total_sd": 2, "clock": "time"}}, {"ar": {"phi": 0.5, "sd": 1}}],
+        },
+        "correlation": [{"between": ["x.ornstein_uhlenbeck", "y.ornstein_uhlenbeck"], "value": 0.4}],
+    },
 }
 
 
