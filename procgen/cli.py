@@ -97,7 +97,9 @@ def column_of(text: str) -> tuple[str, str]:
 @guarded
 def render(
     spec: SpecFile,
-    out: Annotated[str, typer.Option("-o", "--out", metavar="OUT", help="Folder to write.", show_default=False)],
+    out: Annotated[
+        str, typer.Option("-o", "--out", metavar="OUT", help="Folder to write, or a URL.", show_default=False)
+    ],
     paths: Annotated[
         int | None, typer.Option(metavar="N", help="Number of paths, instead of the spec's.", min=1)
     ] = None,
@@ -184,7 +186,7 @@ app.command("export", short_help="Write an ensemble as one file for another tool
 @guarded
 def validate(
     data: Annotated[
-        Path,
+        str,
         typer.Argument(metavar="OUT|DATA", help="An ensemble, or a Parquet or CSV file.", show_default=False),
     ],
     spec: Annotated[Path | None, typer.Option(metavar="SPEC", help="The spec that DATA should follow.")] = None,
@@ -338,7 +340,7 @@ def schema() -> None:
 )
 @guarded
 def digest(
-    out: Annotated[Path, typer.Argument(metavar="OUT", help="A rendered ensemble.", show_default=False)],
+    out: Annotated[str, typer.Argument(metavar="OUT", help="A rendered ensemble.", show_default=False)],
     expect: Expect = None,
     redraw: Annotated[
         bool, typer.Option("--redraw", help="Also draw some paths again; name the first difference.")

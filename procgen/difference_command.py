@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from pathlib import Path
 from typing import Annotated, Any
 
 import typer
@@ -21,8 +20,8 @@ WHAT = "A spec, the folder of an ensemble, or a manifest.json."
 
 @guarded
 def difference(
-    a: Annotated[Path, typer.Argument(metavar="A", help=WHAT, show_default=False)],
-    b: Annotated[Path | None, typer.Argument(metavar="B", help=f"{WHAT} Or --variant.", show_default=False)] = None,
+    a: Annotated[str, typer.Argument(metavar="A", help=WHAT, show_default=False)],
+    b: Annotated[str | None, typer.Argument(metavar="B", help=f"{WHAT} Or --variant.", show_default=False)] = None,
     variant: Annotated[
         str | None, typer.Option(metavar="NAME", help="This variant of the spec A, instead of B.")
     ] = None,

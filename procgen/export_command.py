@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from pathlib import Path
 from typing import Annotated
 
 import typer
@@ -41,7 +40,7 @@ Columns = Annotated[
 
 @guarded
 def export(
-    source: Annotated[Path, typer.Argument(metavar="OUT", help="A rendered ensemble.", show_default=False)],
+    source: Annotated[str, typer.Argument(metavar="OUT", help="A rendered ensemble.", show_default=False)],
     out: Annotated[
         str,
         typer.Option(

@@ -13,6 +13,7 @@ from procgen.ensemble.beside import First, common, note, side_by_side
 from procgen.ensemble.ensemble import Ensemble, open_ensemble
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.manifest import Manifest
+from procgen.ensemble.places import Place, place_of
 from procgen.ensemble.plan import Block
 from procgen.ensemble.seal import refuse_changed
 from procgen.ensemble.source import read_spec
@@ -231,20 +232,20 @@ def _side(given: Any) -> Side:
     if isinstance(given, Ensemble):
         return Side(str(getattr(given, "path", "in memory")), given.spec, given)
     if isinstance(given, str | Path):
-        path = Path(given)
+        path = place_of(given)
         if path.is_dir():
             found = open_ensemble(path)
             return Side(str(path), found.spec, found)
         if path.suffix == ".json":
             return _of_manifest(path)
-        return Side(str(path), spec_of(path), None)
+        return Side(str(path), spec_of(given), None)
     spec = spec_of(given)
     variant = spec.written.variant if spec.written is not None else ""
     name = spec.file or spec.title or "a spec"
     return Side(f"{name}, variant {variant}" if variant else name, spec, None)
 
 
-def _of_manifest(path: Path) -> Side:
+def _of_manifest(path: Place) -> Side:
     """An old manifest: with its values where its files stand beside it, else its spec alone."""
     data = Folder(path.parent).read_json(path.name)
     if data is None:

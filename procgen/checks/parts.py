@@ -25,6 +25,7 @@ from procgen.ensemble.columns import as_float
 from procgen.ensemble.ensemble import OnDisk, open_ensemble
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.manifest import node
+from procgen.ensemble.places import address
 from procgen.ensemble.plan import Block
 
 WORK = "procgen.checks.parts:gather_chain"
@@ -34,7 +35,7 @@ Tick = Callable[[int], None]
 
 def tasks(ensemble: OnDisk, spec: Any, columns: Mapping[str, str], same_draws: bool) -> list[dict[str, Any]]:
     """One task for each range of paths, in order; `columns` are the series of `spec` and where they stand."""
-    out = str(ensemble.path.absolute())
+    out = address(ensemble.path)
     shared = {"out": out, "manifest": ensemble.digest, "raw": spec.raw, "columns": dict(columns)}
     shared["same_draws"] = same_draws
     chains: dict[tuple[int, int], list[int]] = {}

@@ -16,6 +16,7 @@ from procgen.checks.tree import Tree
 from procgen.checks.verdict import Check
 from procgen.ensemble.cluster import opened
 from procgen.ensemble.engines import Progress, default_workers
+from procgen.ensemble.places import place_of
 
 WORTH = 16_000_000  # values that repay one more process: it derives the theory for itself
 
@@ -44,7 +45,7 @@ def origin(data: Any, spec: Any, columns: Mapping[str, str] | None) -> Origin:
 
     spec = None if spec is None else spec_of(spec)
     if isinstance(data, str | Path):
-        path = Path(data)
+        path = place_of(data)
         if not path.exists():
             raise TableError(f"there is no file or folder {path}; check the path")
         if path.is_dir():
@@ -54,6 +55,8 @@ def origin(data: Any, spec: Any, columns: Mapping[str, str] | None) -> Origin:
         else:
             from procgen.checks.foreign import read_table
 
+            if not isinstance(path, Path):
+                raise TableError(f"{path} is a table behind a URL; bring it to this machine, then give its path")
             _need_spec(spec, path)
             return read_table(path, spec, columns)
     if hasattr(data, "blocks") and hasattr(data, "whole"):
@@ -139,7 +142,8 @@ class EnsembleOrigin:
         if workers is None and scheduler is None:
             workers = default_workers(self.rows * len(self.columns), WORTH)
         with opened(scheduler, workers) as engine:
-            engine.check_sees(str(self.ensemble.path.absolute()))
+            if isinstance(self.ensemble.path, Path):
+                engine.check_sees(str(self.ensemble.path.absolute()))
             engine.run(todo, WORK, keep, progress, 0, self.rows)
         self.faults.sort(key=lambda check: check.probe)
         self._compare_digests(nodes)

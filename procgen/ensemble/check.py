@@ -17,6 +17,7 @@ from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.expected import departure
 from procgen.ensemble.expected import expected as read_expected
 from procgen.ensemble.manifest import Manifest, PartRecord, node
+from procgen.ensemble.places import Place
 from procgen.ensemble.plan import Block
 from procgen.ensemble.seal import contradictions, other_than_part, refuse_version
 from procgen.ensemble.source import FACTORY, open_source, read_spec
@@ -123,10 +124,9 @@ def check_digest(
 
     Raises EnsembleError when there is no manifest to compare with, or `expect` is no digest.
     """
-    if isinstance(path, Ensemble):
-        path = _home(path)
     wanted = None if expect is None else read_expected(expect)
-    folder = Folder(folder_path(path, "path"))
+    folder = Folder(_home(path) if isinstance(path, Ensemble) else folder_path(path, "path"))
+    path = str(folder.path)
     data = folder.read_json(MANIFEST)
     if data is None:
         raise EnsembleError(f"{path} has no {MANIFEST}; expected a folder that procgen render has finished")
@@ -146,7 +146,7 @@ def check_digest(
     same = not false and manifest.identity.get("stream_version") == STREAM_VERSION
     places = reader.places(damages) if redraw and same else []
     return DigestResult(
-        path=str(path),
+        path=path,
         digest=None if roots is None else digest.total({name: roots[name] for name in manifest.stored}),
         recorded=manifest.digest,
         expected=None if wanted is None else wanted.digest,
@@ -158,7 +158,7 @@ def check_digest(
     )
 
 
-def _home(ensemble: Ensemble) -> Path:
+def _home(ensemble: Ensemble) -> Place:
     if not isinstance(ensemble, OnDisk):
         raise EnsembleError(
             "the ensemble is in memory and has no files to check; .digest is that of its values, and out= writes files"
@@ -177,7 +177,7 @@ def _root_damages(manifest: Manifest, roots: Mapping[str, str], damages: list[Da
 class Reader:
     """Reads and draws the parts of one ensemble."""
 
-    def __init__(self, path: Path, manifest: Manifest, factory: str):
+    def __init__(self, path: Place, manifest: Manifest, factory: str):
         self.path, self.manifest, self.factory = path, manifest, factory
         self.columns = manifest.columns
         self.others: list[str] = []  # what the first part that was read says otherwise than the manifest

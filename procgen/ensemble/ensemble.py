@@ -4,7 +4,6 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Mapping, Sequence
 from functools import cached_property
-from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -15,6 +14,7 @@ from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.forms import form
 from procgen.ensemble.layouts import Layout
 from procgen.ensemble.manifest import Manifest, bytes_text
+from procgen.ensemble.places import Place
 from procgen.ensemble.plan import GROUP_ROWS, Block, cut
 from procgen.ensemble.seal import contradictions, refuse_changed, refuse_version
 from procgen.ensemble.shapes import Shapes
@@ -230,7 +230,7 @@ class Memory(Ensemble):
 class OnDisk(Ensemble):
     """An ensemble in a folder, read part by part."""
 
-    def __init__(self, path: Path, manifest: Manifest, spec: Any = None):
+    def __init__(self, path: Place, manifest: Manifest, spec: Any = None):
         self.path, self.manifest = path, manifest
         self._spec = spec
         super().__init__(manifest.columns, manifest.whole)
@@ -275,7 +275,7 @@ class OnDisk(Ensemble):
                 )
 
 
-def open_ensemble(path: str | Path) -> OnDisk:
+def open_ensemble(path: str | Place) -> OnDisk:
     """The ensemble in a folder that `render` has finished; reads only its manifest.
 
     Raises EnsembleError when there is none, when it was changed, when it is unfinished, when parts are missing,

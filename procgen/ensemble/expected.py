@@ -15,6 +15,7 @@ from procgen.ensemble.beside import First, Redrawn, Tick, common, earliest, firs
 from procgen.ensemble.ensemble import Ensemble, open_ensemble
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.manifest import Manifest
+from procgen.ensemble.places import Place, place_of
 from procgen.ensemble.seal import refuse_changed, refuse_version
 from procgen.ensemble.source import read_spec
 from procgen.ensemble.store import MANIFEST, Folder
@@ -31,7 +32,7 @@ class Expected:
 
     digest: str
     manifest: Manifest | None = None
-    file: Path | None = None
+    file: Place | None = None
 
     def old(self) -> Ensemble:
         """The old ensemble: its files where they still are as they were, else drawn again."""
@@ -53,7 +54,7 @@ def expected(given: str | Path) -> Expected:
     text = str(given).strip()
     if HEX.fullmatch(text):
         return Expected(text.lower())
-    path = Path(given)
+    path = place_of(given)
     file = path / MANIFEST if path.is_dir() else path
     if not file.is_file():
         raise EnsembleError(
@@ -99,6 +100,8 @@ def _explained(new: Any, wanted: Expected, manifest: Manifest, progress: Tick | 
         lines.append(f"drawn again, the old spec gives today's values: the old ones were made otherwise ({made})")
     elif names:
         lines.append("where both are, all values are equal")
+    elif len(old_names) != len(new_names):
+        lines.append("the series that are in both are equal")
     return lines
 
 

@@ -18,6 +18,7 @@ from procgen.ensemble.errors import EnsembleError, system_sentence
 from procgen.ensemble.forms import form
 from procgen.ensemble.layouts import Layout
 from procgen.ensemble.parquet import PartWriter
+from procgen.ensemble.places import Place
 from procgen.ensemble.plan import PART_BYTES, Block
 from procgen.ensemble.store import Folder
 
@@ -96,11 +97,11 @@ def _gathered(folder: Folder, part: Block, columns: Sequence[Column]) -> Iterato
 
 
 @contextlib.contextmanager
-def scratch(folder: Path, size: int) -> Iterator[Any]:
+def scratch(folder: Place, size: int) -> Iterator[Any]:
     """An open file of that size in a folder, without a name, which is gone when it is closed."""
     with contextlib.ExitStack() as stack:
         try:
-            file = stack.enter_context(tempfile.TemporaryFile(dir=folder))
+            file = stack.enter_context(tempfile.TemporaryFile(dir=folder if isinstance(folder, Path) else None))
             if hasattr(os, "posix_fallocate"):  # a full disk is said here; writing into a map could only crash
                 os.posix_fallocate(file.fileno(), 0, size)
             else:

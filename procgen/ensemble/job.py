@@ -19,6 +19,7 @@ from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.layouts import Layout
 from procgen.ensemble.manifest import Manifest, bytes_text
 from procgen.ensemble.part import WORK, Task, row_bytes
+from procgen.ensemble.places import address
 from procgen.ensemble.plan import Block, Chain, batches, chains, narrow_steps
 from procgen.ensemble.present import Present
 from procgen.ensemble.source import FACTORY, Source, open_source, remember, revealable
@@ -208,7 +209,8 @@ class Job:
 
     def _draw(self, engine: Engine, resume: bool, overwrite: bool, progress: Progress | None) -> Manifest:
         self._refuse_too_large()
-        engine.check_sees(str(self.folder.state.absolute()))
+        if isinstance(self.folder.state, Path):
+            engine.check_sees(str(self.folder.state.absolute()))
         if overwrite:
             self.present.remove()
         plan = self.present.chains(resume) or chains(
@@ -235,12 +237,14 @@ class Job:
         return made
 
     def _task(self, chain: Chain, start: int) -> Task:
-        out = str(self.folder.path.absolute())
+        out = address(self.folder.path)
         return Task(self.spec.raw, self.identity, out, self.whole, chain, start, self.reveal, self.factory)
 
     def _refuse_too_large(self) -> None:
         """Refuse what the disk cannot hold, before the parts are even planned."""
         need = self.whole.rows * sum(TYPES[column.type] for column in self.columns)
+        if not isinstance(self.folder.path, Path):
+            return  # a store behind a URL does not say
         free = shutil.disk_usage(self.folder.path).free
         there = sum(max(self.folder.size(name), 0) for name in self.folder.part_files())
         if need - there > free:

@@ -19,6 +19,7 @@ from procgen.ensemble.columns import Column
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.forms import Form, Unit, form
 from procgen.ensemble.layouts import Layout
+from procgen.ensemble.places import Place, readable
 from procgen.ensemble.plan import GROUP_ROWS, Block, cut
 
 if TYPE_CHECKING:
@@ -83,13 +84,13 @@ def _is_list(field: pa.Field) -> bool:
     return pa.types.is_list(field.type)
 
 
-def footer(path: Path) -> tuple[dict[str, Any], dict[str, Any], pq.FileMetaData]:
+def footer(path: Place) -> tuple[dict[str, Any], dict[str, Any], pq.FileMetaData]:
     """A part's identity, digest nodes and Parquet metadata; EnsembleError when it is not a part of ours."""
     import pyarrow as pa
     import pyarrow.parquet as pq
 
     try:
-        found = pq.read_metadata(path)
+        found = pq.read_metadata(readable(path))
         texts = found.metadata or {}
         return json.loads(texts[IDENTITY]), json.loads(texts[NODES]), found
     except (OSError, pa.ArrowException, ValueError) as error:
@@ -103,7 +104,7 @@ def _first_line(error: BaseException) -> str:
 
 
 def read(
-    folder: Path,
+    folder: Place,
     name: str,
     part: Block,
     layout: Layout,
@@ -137,7 +138,7 @@ def read(
             yield piece, found
 
 
-def _read_groups(path: Path, rows: Form, first_path: int, end_path: int) -> Blocks:
+def _read_groups(path: Place, rows: Form, first_path: int, end_path: int) -> Blocks:
     """Blocks of layout long, one row group in memory, however it is cut into them."""
     part, unit = rows.whole, rows.units[0]
     with _opened(path, rows) as file:
@@ -153,7 +154,7 @@ def _read_groups(path: Path, rows: Form, first_path: int, end_path: int) -> Bloc
                     yield block, rows.values(some, block, unit, path)
 
 
-def _piece(path: Path, rows: Form, piece: Block, names: Container[str]) -> dict[str, np.ndarray]:
+def _piece(path: Place, rows: Form, piece: Block, names: Container[str]) -> dict[str, np.ndarray]:
     """The wanted columns of one file in a rectangle."""
     found: dict[str, np.ndarray] = {}
     with _opened(path, rows) as file:
@@ -177,13 +178,13 @@ def _rows(file: pq.ParquetFile, edges: np.ndarray, here: range, names: Sequence[
 
 
 @contextlib.contextmanager
-def _opened(path: Path, rows: Form) -> Iterator[pq.ParquetFile]:
+def _opened(path: Place, rows: Form) -> Iterator[pq.ParquetFile]:
     """A file whose columns and number of rows are as they must be; EnsembleError otherwise, or when it breaks."""
     import pyarrow as pa
     import pyarrow.parquet as pq
 
     try:
-        with pq.ParquetFile(path) as file:
+        with pq.ParquetFile(readable(path)) as file:
             _expect_schema(path, file.schema_arrow, rows.schema)
             if file.metadata.num_rows != rows.total():
                 raise EnsembleError(
@@ -194,7 +195,7 @@ def _opened(path: Path, rows: Form) -> Iterator[pq.ParquetFile]:
         raise EnsembleError(f"{path} is damaged: {_first_line(error)}; draw it again with --resume") from None
 
 
-def _expect_schema(path: Path, found: pa.Schema, expected: pa.Schema) -> None:
+def _expect_schema(path: Place, found: pa.Schema, expected: pa.Schema) -> None:
     types: dict[str, list[str]] = {}
     for name, kind in zip(found.names, found.types, strict=True):
         types.setdefault(name, []).append(str(kind))

@@ -8,7 +8,6 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import asdict, dataclass
-from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -18,6 +17,7 @@ from procgen.ensemble.columns import Column, store
 from procgen.ensemble.draw import Drawer, Tick, empty
 from procgen.ensemble.files import writing
 from procgen.ensemble.layouts import Layout
+from procgen.ensemble.places import place_of
 from procgen.ensemble.plan import Block, Chain, batches, narrow_steps
 from procgen.ensemble.source import FACTORY, Source, open_source
 from procgen.ensemble.store import Folder
@@ -62,7 +62,7 @@ def draw(task: Mapping[str, Any], tick: Tick) -> list[dict[str, Any]]:
 def render_chain(task: Task, tick: Tick = lambda rows: None) -> list[dict[str, Any]]:
     """Draw and write the parts of a chain from `task.start` on; their records for the manifest."""
     source = open_source(task.raw, task.reveal, task.factory)
-    folder = Folder(Path(task.out))
+    folder = Folder(place_of(task.out))
     drawer = Drawer(source, tick, narrow_steps(task.chain, row_bytes(source.columns), source.depth))
     records = []
     for number in range(_take_up(task, folder, drawer), len(task.chain)):

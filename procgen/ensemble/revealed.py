@@ -8,12 +8,14 @@ spec alone; they stand in a folder of their own, so that a reader of all parts o
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
+from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.parquet import IDENTITY
+from procgen.ensemble.places import readable
 from procgen.ensemble.plan import Block
 from procgen.ensemble.store import Folder
 
@@ -89,7 +91,8 @@ def remove(folder: Folder) -> None:
     """Remove the tables that are ours, and their folder when nothing else is in it."""
     folder.remove([name for name in (PATHS, SERIES) if _is_ours(folder, name)])
     try:
-        (folder.path / FOLDER).rmdir()
+        if isinstance(folder.path, Path):
+            (folder.path / FOLDER).rmdir()
     except OSError:
         return  # not there, or somebody keeps other things in it
 
@@ -118,7 +121,7 @@ def _is_ours(folder: Folder, name: str) -> bool:
     import pyarrow.parquet as pq
 
     try:
-        return IDENTITY in (pq.read_schema(folder.path / name).metadata or {})
+        return IDENTITY in (pq.read_schema(readable(folder.path / name)).metadata or {})
     except (OSError, ValueError):
         return False
 

@@ -11,6 +11,7 @@ import json
 import os
 import re
 import secrets
+import tempfile
 import time
 from collections.abc import Iterator, Mapping, Sequence
 from pathlib import Path
@@ -19,6 +20,7 @@ from typing import Any
 import numpy as np
 
 from procgen.ensemble.errors import EnsembleError, InUse, system_sentence
+from procgen.ensemble.places import Place, Remote, place_of, readable
 
 MANIFEST = "manifest.json"
 PLAN = ".state/plan.json"
@@ -26,13 +28,15 @@ PART = re.compile(r"(.+\.)?paths-\d{9,}-\d{9,}(\.steps-\d{9,}-\d{9,})?\.parquet"
 PATIENCE = 3.0  # seconds: workers whose parent was killed are gone by then
 
 
-def folder_path(value: Any, name: str) -> Path:
-    """The path of a folder; TypeError for what is no path, EnsembleError for an empty one."""
+def folder_path(value: Any, name: str) -> Place:
+    """The place of a folder, by path or URL; TypeError for what is neither, EnsembleError for an empty one."""
+    if isinstance(value, Remote):
+        return value
     if not isinstance(value, str | os.PathLike):
         raise TypeError(f"expected {name} to be the path of a folder, got {type(value).__name__}")
     if not os.fspath(value):
         raise EnsembleError(f"expected {name} to be the path of a folder, got an empty text; give one, such as build/a")
-    return Path(value)
+    return place_of(value)
 
 
 def named_path(value: Any) -> Path:
@@ -47,7 +51,7 @@ def named_path(value: Any) -> Path:
 class Folder:
     """The files of one ensemble; errors of the operating system become sentences."""
 
-    def __init__(self, path: Path):
+    def __init__(self, path: Place):
         self.path = path
         self.state = path / ".state"
         self.begun = False  # whether the plan that is there is the one of this render
@@ -56,15 +60,26 @@ class Folder:
     def writing(self, name: str) -> Iterator[Path]:
         """A temporary path that becomes OUT/name when the block ends well, and nothing otherwise."""
         # a token, since processes of several machines may have one number, and one part be drawn twice at once
-        temporary = self.state / f"{Path(name).name}.{os.getpid()}-{secrets.token_hex(4)}.tmp"
+        token = f"{Path(name).name}.{os.getpid()}-{secrets.token_hex(4)}.tmp"
+        temporary = Path(tempfile.gettempdir()) / token if isinstance(self.state, Remote) else self.state / token
         try:
             yield temporary
-            os.replace(temporary, self.path / name)
+            place = self.path / name
+            if isinstance(place, Remote):
+                place.put(temporary, self._remote(token))
+            else:
+                os.replace(temporary, place)
         except OSError as error:
             raise EnsembleError(system_sentence(error, f"writing {self.path / name}")) from None
         finally:
             with contextlib.suppress(OSError):
                 temporary.unlink(missing_ok=True)
+
+    def _remote(self, token: str) -> Remote:
+        """Where a store holds a file that is being brought to it."""
+        place = self.state / token
+        assert isinstance(place, Remote)
+        return place
 
     def write_json(self, name: str, data: Mapping[str, Any]) -> None:
         with self.writing(name) as temporary:
@@ -108,7 +123,7 @@ class Folder:
     def load_state(self, name: str) -> dict[str, np.ndarray] | None:
         """The state at the end of part `name`, or None when it is not there or damaged."""
         try:
-            with np.load(self.state / f"{name}.npz", allow_pickle=False) as data:
+            with np.load(readable(self.state / f"{name}.npz"), allow_pickle=False) as data:
                 return dict(data)
         except Exception:  # a damaged archive shows in many ways; all of them mean: draw again
             return None
@@ -120,7 +135,7 @@ class Folder:
     def part_files(self) -> list[str]:
         """Names in OUT that have the form of a part's name."""
         try:
-            return sorted(name for name in os.listdir(self.path) if PART.fullmatch(name))
+            return sorted(entry.name for entry in self.path.iterdir() if PART.fullmatch(entry.name))
         except FileNotFoundError:
             return []
 
@@ -143,13 +158,22 @@ class Folder:
                     raise EnsembleError(system_sentence(error, f"removing {entry}")) from None
 
     @contextlib.contextmanager
-    def locked(self, patience: float = PATIENCE) -> Iterator[int]:
+    def locked(self, patience: float = PATIENCE) -> Iterator[int | None]:
         """Hold OUT for this process and the workers that inherit the lock's file descriptor.
 
         The operating system drops the lock when the last of them ends, however it ends. Without `fcntl`
         (Windows) nothing is locked. At the end .state is removed, unless it holds a plan to go on with; after a
         failure that left nothing whole there is nothing to go on with, and folders that were made are removed.
+        A store behind a URL has no locks: two renders of one spec into it write the same files, and others are refused.
         """
+        if isinstance(self.path, Remote):
+            try:
+                yield None
+            finally:
+                with contextlib.suppress(OSError):
+                    if not (self.path / PLAN).exists():
+                        self.state.rmdir()
+            return
         made = [folder for folder in (self.path, *self.path.parents) if not folder.exists()]
         if self.state.is_symlink():
             raise EnsembleError(f"{self.state} is a link to another place; remove it, or choose another OUT")
@@ -177,6 +201,7 @@ class Folder:
             os.close(descriptor)
 
     def _lock(self, give_up: float) -> int:
+        assert isinstance(self.state, Path)
         path = self.state / "lock"
         while True:
             self.state.mkdir(parents=True, exist_ok=True)
