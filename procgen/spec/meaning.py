@@ -142,8 +142,11 @@ def _with_parent(label: str, here: Mapping[str, tuple[Entry, str]], there: Mappi
 def _attributes(place: str, owner: Owner) -> Facts:
     if not isinstance(owner, Series):
         return {}
-    found = {name: getattr(owner, name) for name in ("unit", "type", "decimals", "stream", "before")}
-    return {f"{place}.{name}": _Fact(value, shown(value)) for name, value in found.items()}
+    found = {name: getattr(owner, name) for name in ("unit", "type", "decimals", "stream")}
+    facts = {f"{place}.{name}": _Fact(value, shown(value)) for name, value in found.items()}
+    past = owner.before
+    told = "nothing" if past is None else f"{len(past)} values, the last {past[-1]}"
+    return facts | {f"{place}.before": _Fact(past, told)}
 
 
 def _labelled(owner: Owner) -> dict[str, tuple[Entry, str]]:

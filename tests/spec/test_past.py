@@ -170,3 +170,25 @@ def test_a_part_by_itself_is_said_to_be_one(tmp_path):
     more = {"series": {"x": {"of": [AR, {"white_noise": {"sd": 1}}], "before": PAST}, "y": [{"use": "x.ar"}]}}
     (said,) = pg.theory({**HEAD, **more}).as_dict([0])["series"]["x"]["past"]["unconditioned"]
     assert said.startswith("x.ar by itself: a part runs from the mean of where it may stand")
+
+
+def test_a_series_leaves_from_its_past_beside_one_whose_numbers_are_drawn_by_path(tmp_path):
+    drawn = {"ar": {"phi": {"draw": {"uniform": [0.2, 0.8]}, "over": "path"}, "sd": 1}}
+    raw = {**HEAD, "paths": 40, "series": {"x": {"of": [AR], "before": PAST}, "z": [drawn], "w": [{"use": "x"}]}}
+    theory = pg.theory(raw)
+    assert theory.as_dict([0])["series"]["x"]["past"]["last"] == 6.0
+    alone = {**raw, "series": {"x": raw["series"]["x"]}}
+    both = pg.render(raw)
+    assert np.array_equal(both["x"], pg.render(alone)["x"]) and np.array_equal(both["x"], both["w"])
+    assert theory["w"].mean([0]) == pytest.approx(3.0)
+
+
+def test_what_differs_and_what_moves_is_told(tmp_path):
+    from procgen.spec.meaning import changes
+    from procgen.terms.recipe import recipes
+
+    raw = {**HEAD, "series": {"x": {"of": [AR], "before": PAST}, "y": [AR]}}
+    old, new = pg.load(raw), pg.load({**raw, "series": {**raw["series"], "x": {"of": [AR], "before": [*PAST, 7.0]}}})
+    assert [str(c) for c in changes(old, new)] == ["series.x.before: 8 values, the last 6.0 → 9 values, the last 7.0"]
+    assert recipes(new)["x"].moved_from(recipes(old)["x"]) == ("x.ar",)
+    assert recipes(new)["y"].moved_from(recipes(old)["y"]) == ()
