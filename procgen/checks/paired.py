@@ -38,6 +38,9 @@ class Paired:
         return dict(vars(self))
 
 
+DUST = 2.0**-50  # of the size of the values: four units in their last place
+
+
 class Sums:
     """Means, sums of squares and of products of (x, y, y − x) at some steps, over paths that come block by block."""
 
@@ -72,6 +75,8 @@ class Sums:
         if n < 2:
             return Paired(series, step, n, mean_a, mean_b, change, None, None, None)
         x, y, d = self.squares[:, i].tolist()
+        if math.sqrt(d / n) <= DUST * (max(abs(mean_a), abs(mean_b)) + math.sqrt((x + y) / n)):
+            d = 0.0  # a change that is the same on every path, but for the rounding of y − x
         correlation = float(self.product[i]) / math.sqrt(x * y) if x > 0.0 and y > 0.0 else None
         if correlation is not None:
             correlation = min(max(correlation, -1.0), 1.0)

@@ -44,6 +44,16 @@ def test_what_does_not_vary_has_no_correlation_and_no_error_that_rounding_made()
     assert (alone.paths, alone.standard_error, alone.saved) == (1, None, None)
 
 
+def test_a_change_that_is_the_same_on_every_path_has_no_error_whatever_rounding_makes_of_it():
+    x = np.random.default_rng(5).normal(61, 8, (400, 3))
+    y = x + 18.3
+    assert (y - x).std() > 0  # rounding, some 1e-15
+    for row in figures(x, y, (100,)):
+        assert row.change == pytest.approx(18.3, rel=1e-14) and row.standard_error == 0.0 and row.saved == 1.0
+    for row in figures(x, y + 1e-11 * x, (100,)):  # small, and no rounding
+        assert row.standard_error == pytest.approx(1e-11 * x[:, row.step].std(ddof=1) / 20, rel=0.01)
+
+
 def spec(**series):
     return pg.load({"seed": 8, "paths": 4000, "time": {"steps": 12}, "series": series})
 
