@@ -253,6 +253,7 @@ def test_a_new_series_and_another_length_are_told(folder, tmp_path):
     old = folder / "base" / "manifest.json"
     more = Result("digest", folder / "more", "--expect", old)
     assert more.code == 1 and "series wind: new" in more.out and "first difference" not in more.out
+    assert more.out.endswith("the series that are in both are equal\n")
     longer = Result("render", folder / "spec.yaml", "--steps", 41, "-o", tmp_path / "long", "--expect", old)
     assert longer.code == 1 and "compared where both are" in longer.out
     assert "where both are, all values are equal" in longer.out
