@@ -53,4 +53,8 @@ Theory, paths and verdict agree for demo/island.yaml; the faulty spec and the ta
   $out/island/        the paths (Parquet, long layout) and manifest.json
   $out/verdict.txt    the verdict on the paths; verdict.html is a page with pictures, for a browser
   $out/refused.txt    the verdict on the tampered copy; refused.html likewise
+A day's work with it, what was typed and what was seen:
+  demo/forecaster.md    how good a forecast can be at best, and how near three methods come
+  demo/qa-engineer.md   a fixture with a digest in the test file, a pull request, a damaged file
+  demo/risk-analyst.md  a fan with clustered and joint extremes, a crisis beside it, a spreadsheet
 END
