@@ -208,3 +208,12 @@ def test_what_is_stated_is_in_the_blues_of_okabe_and_ito():
     # orange 230, 159, 0.
     assert (LIGHT["stated"], DARK["stated"]) == ("#0072b2", "#56b4e9")
     assert (LIGHT["alarm"], DARK["alarm"]) == ("#d55e00", "#e69f00")
+
+
+def test_a_fan_shows_the_record_that_it_leaves_from():
+    record = [71.0, 74.5, 78.0, 75.0]
+    body = {"flow": {"of": FLOW["flow"]["of"], "before": record}}
+    fan = of_data(ensemble(body, paths=60, steps=60)).sections[0].charts[0]
+    (line,) = [mark for mark in fan.marks if isinstance(mark, Line) and mark.label == "recorded before step 0"]
+    assert np.array_equal(line.x, [-4, -3, -2, -1]) and np.array_equal(line.y, record)
+    assert fan.x.low == -4 and fan.y.low < 71.0

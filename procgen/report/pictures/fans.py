@@ -51,9 +51,12 @@ def fan(subject: Subject, steps: int, title: str) -> Chart:
     if seen is not None:
         for level, row in zip((0, 2, 4), seen[[0, 2, 4]], strict=True):
             marks.append(Line(at, row, "seen", "seen 5, 50, 95 %" if level == 0 else ""))
-    y = _range(stated, seen, shown)
+    past = subject.past[-max(1, steps // 2) :]
+    if len(past):
+        marks.append(Line(np.arange(-len(past), 0), past, "seen", "recorded before step 0"))
+    y = _range(stated, seen, shown, past)
     caption = _caption(subject, stated, kind, values) + _beyond(y, shown)
-    x = step_axis(subject.grid, 0, steps - 1)
+    x = step_axis(subject.grid, -len(past), steps - 1)
     return Chart(title, caption, x, y, marks, *_numbers(at, stated, seen, shown))
 
 
@@ -197,9 +200,9 @@ def _numbers(
     return tuple(head), texts(*columns)
 
 
-def _range(stated: NDArray | None, seen: NDArray | None, shown: NDArray) -> Axis:
-    """Up and down to all bands, and to the paths as far as these do not dwarf the bands."""
-    bands = [x[np.isfinite(x)] for x in (stated, seen) if x is not None]
+def _range(stated: NDArray | None, seen: NDArray | None, shown: NDArray, past: NDArray | None = None) -> Axis:
+    """Up and down to all bands and to what was recorded, and to the paths as far as these do not dwarf the bands."""
+    bands = [x[np.isfinite(x)] for x in (stated, seen, past) if x is not None]
     paths = shown[np.isfinite(shown)]
     if not len(paths):
         paths = np.zeros(1)

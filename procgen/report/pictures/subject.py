@@ -46,6 +46,11 @@ class Subject:
         return self.sample.spec.time
 
     @property
+    def past(self) -> NDArray:
+        """What was recorded before step 0, oldest first; nothing where it leaves from nothing."""
+        return np.array(self.sample.spec.series[self.name].before or ())
+
+    @property
     def called(self) -> str:
         """Its name, with the unit."""
         return f"{self.name} ({self.unit})" if self.unit else self.name
