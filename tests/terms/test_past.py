@@ -327,3 +327,19 @@ def test_a_cycle_leaves_from_a_stated_place():
         assert np.allclose(theory[name].variance(k - 1), 4 * (1 - 0.81**k) / (1 - 0.81), rtol=1e-12)
     assert np.allclose(theory.cross("x", "y").covariance(k - 1, k - 1), 0.0, atol=1e-12)
     assert pg.validate(pg.render(spec), false_alarm=1e-8).agrees
+
+
+def test_correlated_shocks_stay_so_from_step_0_on():
+    """Cov(x_t, y_t) = ρ Σ (φψ)ᵏ over the shocks from step 0 on, whatever the record of x was."""
+    data = {
+        "seed": 7,
+        "paths": 2000,
+        "time": {"steps": STEPS},
+        "series": {"x": {"of": [AR, LEVEL], "before": RECORD.tolist()}, "y": [{"ar": {"phi": 0.8, "sd": 2}}]},
+        "correlation": [{"between": ["x.ar", "y.ar"], "value": 0.5}],
+    }
+    theory = pg.theory(data)
+    expected = 0.5 * 0.5 * 2 * np.cumsum(0.48**AHEAD)
+    assert np.allclose(theory.cross("x", "y").covariance(AHEAD, AHEAD), expected, rtol=1e-10)
+    assert np.allclose(theory["y"].variance(AHEAD), 4 / (1 - 0.64), rtol=1e-10)
+    assert pg.validate(pg.render(data), false_alarm=1e-8).agrees
