@@ -15,7 +15,7 @@ from procgen.checks.rectangles import grouped, named
 from procgen.checks.tree import Tree
 from procgen.checks.verdict import Check
 from procgen.ensemble.cluster import opened
-from procgen.ensemble.engines import Progress, default_workers
+from procgen.ensemble.engines import Progress, Work, default_workers
 from procgen.ensemble.places import place_of
 
 WORTH = 16_000_000  # values that repay one more process: it derives the theory for itself
@@ -144,7 +144,7 @@ class EnsembleOrigin:
         with opened(scheduler, workers) as engine:
             if isinstance(self.ensemble.path, Path):
                 engine.check_sees(str(self.ensemble.path.absolute()))
-            engine.run(todo, WORK, keep, progress, 0, self.rows)
+            engine.run(Work(todo, WORK, keep, progress, 0, self.rows))
         self.faults.sort(key=lambda check: check.probe)
         self._compare_digests(nodes)
         return tree.total(Gather(plan_for(todo[0])))

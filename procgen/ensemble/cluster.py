@@ -18,12 +18,12 @@ import secrets
 import threading
 import time
 from collections import deque
-from collections.abc import Callable, Iterator, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass, field
 from typing import Any
 
 from procgen.chance.streams import STREAM_VERSION
-from procgen.ensemble.engines import Engine, Here, Progress, Records, function
+from procgen.ensemble.engines import Engine, Here, Work, function
 from procgen.ensemble.errors import EnsembleError
 
 LOCAL = "local"
@@ -163,23 +163,15 @@ class Cluster:
                 "and give its address, such as tcp://10.0.0.5:8786, or `local` for one on this machine"
             ) from None
 
-    def run(
-        self,
-        tasks: Sequence[Mapping[str, Any]],
-        work: str,
-        keep: Callable[[Records], None],
-        progress: Progress | None = None,
-        done: int = 0,
-        rows: int = 0,
-    ) -> None:
-        """Do `work` on all tasks; `keep` takes the records of each, as they come.
+    def run(self, work: Work) -> None:
+        """Do all tasks.
 
-        Raises EnsembleError of the first task that failed, of one under which workers died TRIES times, and when the
+        Raises EnsembleError of the first that failed, of one under which workers died TRIES times, and when the
         scheduler stays away.
         """
-        job = _Run(self, work, keep, progress, done, rows)
+        job = _Run(self, work)
         try:
-            job.through(tasks)
+            job.through()
         finally:
             job.end()
 
@@ -202,19 +194,10 @@ class Cluster:
 class _Run:
     """One call of `Cluster.run`."""
 
-    def __init__(
-        self,
-        cluster: Cluster,
-        work: str,
-        keep: Callable[[Records], None],
-        progress: Progress | None,
-        done: int,
-        rows: int,
-    ):
-        self.cluster, self.work, self.keep = cluster, work, keep
-        self.progress, self.done, self.rows = progress, done, rows
+    def __init__(self, cluster: Cluster, work: Work):
+        self.cluster, self.work, self.done = cluster, work, work.done
         self.topic = f"procgen-{secrets.token_hex(8)}"
-        self.waiting: deque[Flight] = deque()
+        self.waiting = deque(Flight(number, task) for number, task in enumerate(work.tasks))
         self.flying: dict[int, Flight] = {}
         self.ended: queue.SimpleQueue[tuple[int, str]] = queue.SimpleQueue()  # number of a task, key of a copy
         self.took: list[float] = []
@@ -229,8 +212,7 @@ class _Run:
         if flight is not None:
             flight.rows = max(flight.rows, message["rows"])
 
-    def through(self, tasks: Sequence[Mapping[str, Any]]) -> None:
-        self.waiting.extend(Flight(number, task) for number, task in enumerate(tasks))
+    def through(self) -> None:
         room, looked = 0, 0.0
         while self.waiting or self.flying:
             if self.cluster.client.status != "running":
@@ -243,8 +225,8 @@ class _Run:
                 self._hurry(room)
             with contextlib.suppress(queue.Empty):
                 self._land(*self.ended.get(timeout=OFTEN))
-            if self.progress is not None:
-                self.progress(self.done + sum(flight.rows for flight in self.flying.values()), self.rows)
+            if self.work.progress is not None:
+                self.work.progress(self.done + sum(flight.rows for flight in self.flying.values()), self.work.rows)
 
     def _room(self) -> int:
         try:
@@ -254,7 +236,7 @@ class _Run:
 
     def _begin(self, flight: Flight) -> None:
         key = f"{self.topic}-{flight.number}-{secrets.token_hex(4)}"
-        text = json.dumps({"work": self.work, "task": flight.task, "topic": self.topic, "number": flight.number})
+        text = json.dumps({"work": self.work.name, "task": flight.task, "topic": self.topic, "number": flight.number})
         self.flying[flight.number] = flight
         flight.begun = time.monotonic()
         future = self.cluster.client.submit(perform, text, key=key, pure=False, priority=-flight.number)
@@ -281,7 +263,7 @@ class _Run:
             copy.cancel()
         self.done += answer["rows"]
         self.took.append(time.monotonic() - flight.begun)
-        self.keep(answer["records"])
+        self.work.keep(answer["records"])
 
     def _retry(self, flight: Flight, error: BaseException) -> None:
         if self.cluster.client.status != "running":

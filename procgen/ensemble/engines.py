@@ -54,18 +54,11 @@ class Stopped(Exception):
 class Crew:
     """The state that the calling process and its workers' threads share."""
 
-    def __init__(
-        self,
-        tasks: Sequence[Mapping[str, Any]],
-        keep: Callable[[Records], None],
-        progress: Progress | None,
-        done: int,
-        rows: int,
-    ):
-        self.waiting = deque(tasks)
-        self._keep = keep
+    def __init__(self, work: Work):
+        self.waiting = deque(work.tasks)
+        self._keep = work.keep
         self.error: BaseException | None = None
-        self._progress, self._done, self._rows = progress, done, rows
+        self._progress, self._done, self._rows = work.progress, work.done, work.rows
         self._caller = threading.current_thread()
         self._lock, self._kept = threading.Lock(), threading.Lock()
 
@@ -115,8 +108,28 @@ class Crew:
                 signal.signal(signal.SIGINT, signal.default_int_handler)
 
 
+@dataclass(frozen=True)
+class Work:
+    """Tasks, and who is told of them.
+
+    Attributes
+    ----------
+    tasks : data for JSON; begun in their order
+    name : "module:function" that does a task
+    keep : takes the records of a task, as they come, one call at a time
+    progress : called with (rows done, rows in all); `done` of the `rows` are done at the beginning
+    """
+
+    tasks: Sequence[Mapping[str, Any]]
+    name: str
+    keep: Callable[[Records], None]
+    progress: Progress | None = None
+    done: int = 0
+    rows: int = 0
+
+
 class Engine(Protocol):
-    """Who works on tasks: `Here`, or a `Cluster`."""
+    """Who works: `Here`, or a `Cluster`."""
 
     @property
     def size(self) -> int:
@@ -125,21 +138,17 @@ class Engine(Protocol):
     def check_sees(self, folder: str) -> None:
         """Raise EnsembleError when a worker does not see the folder."""
 
-    def run(
-        self,
-        tasks: Sequence[Mapping[str, Any]],
-        work: str,
-        keep: Callable[[Records], None],
-        progress: Progress | None = None,
-        done: int = 0,
-        rows: int = 0,
-    ) -> None:
-        """Do `work` on all tasks; `keep` takes the records of each, as they come, one call at a time."""
+    def run(self, work: Work) -> None:
+        """Do all tasks. Raises EnsembleError of the first that failed, or when it cannot go on."""
 
 
 @dataclass(frozen=True)
 class Here:
-    """This process, and worker processes beside it; arguments as for `run`."""
+    """This process, and worker processes beside it, `size` in all.
+
+    Workers hold the file descriptor `inherit` as long as they live. When one dies, the error has the `advice`;
+    KeyboardInterrupt passes through after all have ended.
+    """
 
     size: int
     inherit: int | None = None
@@ -148,40 +157,12 @@ class Here:
     def check_sees(self, folder: str) -> None:
         """Nothing to check: it is one machine."""
 
-    def run(
-        self,
-        tasks: Sequence[Mapping[str, Any]],
-        work: str,
-        keep: Callable[[Records], None],
-        progress: Progress | None = None,
-        done: int = 0,
-        rows: int = 0,
-    ) -> None:
-        run(tasks, work, keep, self.size, progress, done, rows, self.inherit, self.advice)
-
-
-def run(
-    tasks: Sequence[Mapping[str, Any]],
-    work: str,
-    keep: Callable[[Records], None],
-    workers: int = 1,
-    progress: Progress | None = None,
-    done: int = 0,
-    rows: int = 0,
-    inherit: int | None = None,
-    advice: str = "use fewer --workers",
-) -> None:
-    """Do `work` on all tasks with `workers` processes, this one included; `keep` takes the records of each.
-
-    Tasks are begun in their order, and their records kept in the order in which they come, one call at a time.
-    `inherit` is a file descriptor that workers hold as long as they live. Raises EnsembleError of the first task that
-    failed, or when a worker died, with the `advice`; KeyboardInterrupt passes through after the workers have ended.
-    """
-    crew = Crew(tasks, keep, progress, done, rows)
-    with crew.interruptible():
-        _work(crew, work, min(workers, len(tasks)) - 1, inherit, advice)
-    if crew.error is not None:
-        raise crew.error
+    def run(self, work: Work) -> None:
+        crew = Crew(work)
+        with crew.interruptible():
+            _work(crew, work.name, min(self.size, len(work.tasks)) - 1, self.inherit, self.advice)
+        if crew.error is not None:
+            raise crew.error
 
 
 def _work(crew: Crew, work: str, helping: int, inherit: int | None, advice: str) -> None:

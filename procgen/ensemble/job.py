@@ -13,7 +13,7 @@ from procgen.ensemble import engines, manifest, revealed
 from procgen.ensemble.cluster import opened
 from procgen.ensemble.columns import TYPES, store
 from procgen.ensemble.draw import Drawer, empty
-from procgen.ensemble.engines import Engine, Progress
+from procgen.ensemble.engines import Engine, Progress, Work
 from procgen.ensemble.ensemble import Ensemble, Memory, OnDisk
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.layouts import Layout
@@ -228,7 +228,8 @@ class Job:
             if start < len(chain):
                 tasks.append(self._task(chain, start))
         done = sum(Block(**record["part"]).rows for record in records)
-        engine.run([task.json() for task in tasks], WORK, records.extend, progress, done, self.whole.rows)
+        todo = [task.json() for task in tasks]
+        engine.run(Work(todo, WORK, records.extend, progress, done, self.whole.rows))
         if self.factory == FACTORY:
             revealed.write(self.folder, self.spec, self.whole, self.identity)
         made = self._make_manifest(records)
