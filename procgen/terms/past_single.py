@@ -27,7 +27,10 @@ Told = tuple[Entry, tuple[str, ...]]
 def single(entry: Entry, node: Node, x: Array) -> Told | Unknown:
     """An entry that leaves from its values x (n,), oldest first, and what could not be conditioned."""
     if node.term.noise:
-        return _noise(entry, node.term, node.name, x)
+        alone, why = _noise(entry, node.term, node.name, x)
+        if alone is entry and why:
+            return Unknown(f"nothing of it is told by its values ({why[0]}); remove before at the series")
+        return alone, why
     recursion = recursion_of(node.term)
     if recursion is None:
         return Unknown(f"{node.term.kind} cannot be told where it stands; remove before at the series")

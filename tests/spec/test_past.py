@@ -109,6 +109,10 @@ PAST = [3.0, 1.0, 4.0, 1.0, 5.0, 9.0, 2.0, 6.0]
         ([{"constant": 3}], r"nothing in x is random, so its past changes nothing; remove before"),
         ([{"ar": {"phi": 0.5, "sd": 1, "before": {"x": [1]}}}], r"x.ar \(ar\) has a `before` of its own, .* one"),
         ([{"exp": [AR]}], r"x.exp cannot leave from the past of x: exp cannot be told where it stands; remove before"),
+        (
+            [{"stochastic_volatility": {"sd": 1, "phi": 0.9, "eta": 0.2}}],
+            r"x.stochastic_volatility cannot leave .* nothing of it is told by its values .* remove before",
+        ),
         ([{"poisson": {"mean": 3}}], r"x.poisson cannot leave from the past of x: poisson cannot be told"),
         (
             [AR, {"random_walk": {"sd": 1, "law": "laplace"}}],
@@ -164,6 +168,13 @@ def test_theory_says_what_it_leaves_from_and_what_could_not_be_conditioned(tmp_p
     assert "leaves from its recorded past of 8 values, the last 6 at step −1" in text
     assert "what came before could not be conditioned: on the pasts of y.ar" in text
     assert "x: settles from its given start" in text
+
+
+def test_a_filter_leaves_from_its_values_where_the_state_of_its_shock_cannot_be_told(tmp_path):
+    shock = {"switching_noise": {"sd": {"calm": 1, "storm": 4}, "durations": {"calm": 40, "storm": 8}}}
+    body = [{"ar": {"phi": 0.5, "shock": shock}}]
+    assert told(tmp_path, body)["unconditioned"] == ["the state of switching_noise in x.ar is in its stationary law"]
+    assert pg.theory(pg.load(tmp_path / "s.yaml"))["x"].mean([0]) == pytest.approx(3.0)
 
 
 def test_a_part_by_itself_is_said_to_be_one(tmp_path):
