@@ -45,6 +45,8 @@ def _pooled(plan: SeriesPlan, pool: Pool, powers: Powers) -> Iterator[Check]:
         place += 1
     if pool.level is not None:
         yield from _level(plan, pool.level, sample_of(powers, place), sample_of(powers, place + 1))
+    if pool.slow is not None:
+        yield from pool.slow.check(plan.name, sample_of(powers, pool.size - 1))
 
 
 def _average(plan: SeriesPlan, pool: Pool, k: int, lag: int, sample: Sample) -> Check:

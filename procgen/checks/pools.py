@@ -17,6 +17,7 @@ from numpy.typing import NDArray
 
 from procgen.checks import rounding
 from procgen.checks.blocks import Window, across, add_products, scratch
+from procgen.checks.slow import Slow, SlowLane, plan_slow
 
 GAUSSIAN_WINDOW = 96  # steps of a pooled statistic with an exact law (its cost grows with the cube)
 WINDOW = 4096  # steps of a pooled statistic without one
@@ -65,6 +66,7 @@ class Pool:
     coarse: str = ""  # why rounding leaves the averages without a theory
     changes: tuple[Changes, ...] = ()
     level: Level | None = None
+    slow: Slow | None = None
 
     @cached_property
     def exact(self) -> NDArray | None:
@@ -73,8 +75,8 @@ class Pool:
 
     @property
     def size(self) -> int:
-        """Numbers of a path: the average, those at each lag, of the changes, and two of the level."""
-        return 1 + len(self.lags) + len(self.changes) + 2 * (self.level is not None)
+        """Numbers of a path: the average, those at each lag, of the changes, two of the level, and the slope."""
+        return 1 + len(self.lags) + len(self.changes) + 2 * (self.level is not None) + (self.slow is not None)
 
 
 def plan_pool(plan: Any, steps: int, blind: bool) -> Pool | None:
@@ -99,6 +101,8 @@ def plan_pool(plan: Any, steps: int, blind: bool) -> Pool | None:
             earlier = rows[0, : width - lag]
             np.divide(row[lag:], earlier, out=slope[lag:], where=earlier > 0)
         pool.steady = plan.theory.stationarity.covariance_stationary
+    if not pool.coarse:
+        pool.slow = plan_slow(plan.theory, steps, noise(plan.grain))
     if blind and not pool.coarse:
         if plan.theory.stationarity.covariance_stationary:
             pool.level = _level(plan, steps)
@@ -210,10 +214,13 @@ class PoolLane:
         self.unknown = np.zeros(paths, dtype=bool)
         self.changes = [np.full((len(each.steps), paths), np.nan) for each in pool.changes]
         self.halves = np.zeros((2, paths))
+        self.slow = SlowLane(pool.slow, paths) if pool.slow else None
 
     def absorb(self, x: NDArray, step: int) -> None:
         """Add a tile (steps, paths)."""
         self._window(x, step)
+        if self.slow is not None:
+            self.slow.absorb(x, step)
         for each, kept in zip(self.pool.changes, self.changes, strict=True):
             for i in np.flatnonzero((each.steps >= step) & (each.steps < step + len(x))):
                 kept[i] = x[each.steps[i] - step]
@@ -265,6 +272,8 @@ class PoolLane:
             rows.append(across((change * change).T) / len(change) - each.variance)
         if pool.level is not None:
             rows += self._level(pool.level)
+        if self.slow is not None:
+            rows.append(np.where(self.unknown, np.nan, self.slow.averages()))
         return np.array(rows).T
 
     def _beside_slopes(self, sums: NDArray) -> None:

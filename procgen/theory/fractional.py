@@ -35,6 +35,11 @@ class StationaryGaussian(Process):
         super().__init__(name, ingredients)
         self.autocovariance = autocovariance
 
+    @property
+    def long_memory(self) -> float:
+        """The d of its spectral density, which goes like frequency^-2d towards 0."""
+        return self.autocovariance.long_memory
+
     def covariance(self, t: Steps, s: Steps) -> np.ndarray:
         return self.autocovariance(np.abs(np.asarray(t) - np.asarray(s)))
 
@@ -56,7 +61,7 @@ class FractionalNoise:
     """Autocovariance of (1 - B)^-d of white noise of a variance: gamma(k) = gamma(k - 1) (k - 1 + d) / (k - d)."""
 
     def __init__(self, d: float, variance: float = 1.0):
-        self.d, self.shock_variance = d, variance
+        self.d, self.shock_variance, self.long_memory = d, variance, d
         self.variance = variance * math.exp(math.lgamma(1.0 - 2.0 * d) - 2.0 * math.lgamma(1.0 - d))
 
     @cached_property
@@ -95,7 +100,7 @@ class GaussianNoise:
     """Autocovariance of fractional Gaussian noise: variance (|k + 1|^2H - 2 |k|^2H + |k - 1|^2H) / 2."""
 
     def __init__(self, hurst: float, variance: float = 1.0):
-        self.hurst, self.variance = hurst, variance
+        self.hurst, self.variance, self.long_memory = hurst, variance, hurst - 0.5
 
     def __call__(self, lags: np.ndarray) -> np.ndarray:
         lags = np.asarray(lags, np.int64)
@@ -132,7 +137,7 @@ class Filtered:
     """Autocovariance of an ARMA filter theta(B) / phi(B) of a stationary series."""
 
     def __init__(self, noise: Any, phi: Sequence[float], theta: Sequence[float]):
-        self.noise, self.phi, self.theta = noise, tuple(phi), tuple(theta)
+        self.noise, self.phi, self.theta, self.long_memory = noise, tuple(phi), tuple(theta), noise.long_memory
 
     @cached_property
     def _weights(self) -> np.ndarray:
