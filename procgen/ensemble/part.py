@@ -37,7 +37,9 @@ class Task:
     factory: str = FACTORY
 
     def json(self) -> dict[str, Any]:
-        return asdict(self)
+        """The task as data; what tasks have in common is shared, not copied."""
+        chain = [asdict(part) for part in self.chain]
+        return {**vars(self), "whole": asdict(self.whole), "chain": chain}
 
     @classmethod
     def read(cls, data: Mapping[str, Any]) -> Task:

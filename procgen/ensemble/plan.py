@@ -15,6 +15,7 @@ CELL = 1024  # paths in one node of the digest
 STEPS = 65_536  # steps in one leaf of the digest
 
 PART_BYTES = 64 << 20
+MOST_PARTS = 20_000  # of usual size; beyond, parts grow, so that a manifest and a scheduler can hold them
 BUFFER_BYTES = 128 << 20
 GROUP_ROWS = 1 << 20
 TILE = 1 << 18
@@ -97,13 +98,14 @@ def _grain(paths: int, count: int) -> int:
 
 def _part_shape(whole: Block, row_bytes: int) -> tuple[int, int]:
     """Paths and steps of a part: all steps when a tolerably wide range of paths then fits."""
+    size = max(PART_BYTES, whole.rows * row_bytes // MOST_PARTS)
     narrow = min(whole.paths, NARROW)
-    if whole.steps * narrow * row_bytes <= 2 * PART_BYTES:
-        width = max(PART_BYTES // (whole.steps * row_bytes), narrow)
+    if whole.steps * narrow * row_bytes <= 2 * size:
+        width = max(size // (whole.steps * row_bytes), narrow)
         return _floor(width, CELL if width >= CELL else LANES), whole.steps
-    fits = 2 * PART_BYTES // (STEPS * row_bytes)
-    width = _floor(min(narrow, max(fits, 1)), LANES)
-    blocks = max(2 * PART_BYTES // (min(width, whole.paths) * STEPS * row_bytes), 1)
+    room = max(2 * PART_BYTES, size)
+    width = _floor(min(narrow, max(room // (STEPS * row_bytes), 1)), LANES)
+    blocks = max(room // (min(width, whole.paths) * STEPS * row_bytes), 1)
     return width, min(blocks * STEPS, whole.steps)
 
 

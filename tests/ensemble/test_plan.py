@@ -1,5 +1,6 @@
 """Parts, batches, lanes and tiles: every row once and in order, bounded, cut where digests allow."""
 
+import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
@@ -99,3 +100,12 @@ def test_only_narrow_runs_repay_compiling():
     assert narrow_steps((Block(0, 4096, 0, 1000),), 8) == 0
     assert narrow_steps((Block(0, 1, 0, 2_000_000),), 8) == 2_000_000
     assert narrow_steps((Block(0, 100, 0, 5000),), 8) == 5000
+
+
+@pytest.mark.parametrize("steps", [10, 10_000, 10**9])
+def test_parts_of_the_largest_ensembles_grow_so_that_a_manifest_can_list_them(steps):
+    whole = Block(0, 10**13 // steps, 0, steps)
+    parts = [part for chain in plan.chains(whole, 8) for part in chain]
+    assert len(parts) <= 1.1 * plan.MOST_PARTS
+    assert sum(part.rows for part in parts) == whole.rows
+    assert max(part.rows for part in parts) * 8 < 5e9  # what a store behind a URL moves in one step
