@@ -191,13 +191,13 @@ class Spec:
     parameters: Mapping[str, Any] = field(default_factory=Frozen)  # declared draws by name (`spec.varying`)
     written: Written | None = field(compare=False, repr=False, default=None)  # what `variant` and `set` read again
 
-    @property
     def __repr__(self) -> str:
         head = f"{self.title}: " if self.title else ""
         size = f"{self.paths} paths × {self.time.steps} steps"
         variants = f", variants {', '.join(self.variants)}" if self.variants else ""
         return f"<Spec {head}{', '.join(self.series)}; {size}, seed {self.seed}{variants}>"
 
+    @property
     def variants(self) -> tuple[str, ...]:
         """The names of its variants, in the order of writing."""
         return () if self.written is None else tuple(self.written.variants)
