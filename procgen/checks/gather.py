@@ -17,6 +17,7 @@ from procgen.checks import missing
 from procgen.checks.errors import ErrorSums
 from procgen.checks.probes import CrossPlan, SeriesPlan
 from procgen.checks.recover import Cannot, Expected, Route, dither
+from procgen.checks.relations import Relation
 from procgen.checks.shocks import FAR, MEMORY_LAGS, NEAR, SHOCK_ARRAYS, CrossSums, ShockSums
 from procgen.checks.special import EventSums
 from procgen.checks.squares import Squares, SquareSums
@@ -38,6 +39,7 @@ class Plan:
     squares: Mapping[str, Squares] = field(default_factory=dict)
     gaps: dict[str, Any] = field(default_factory=dict)  # series -> the term that leaves values out
     noise: dict[str, float] = field(default_factory=dict)  # series -> variance that rounding adds to a shock
+    relations: Sequence[Relation] = ()
 
     def __post_init__(self) -> None:
         self.names = [plan.name for plan in self.series]
@@ -119,6 +121,7 @@ class Gather:
         self.products = Powers(len(plan.products))
         self.crossed = Powers(sum(len(pair.places) for pair in plan.cross))
         self.pooled = [Powers(p.pool.size) if p.pool else None for p in plan.series]
+        self.related = [Powers(relation.pool.size) for relation in plan.relations]
         self.kept = Kept(len(plan.kept))
         self.routes = {name: way for name, way in plan.routes.items() if isinstance(way, Route)}
         scores = {name: way.scores for name, way in self.routes.items() if way.scores is not None}
@@ -131,7 +134,9 @@ class Gather:
         self.squares = {name: SquareSums(each) for name, each in plan.squares.items()}
         self.cross = {pair: sums_of(stated) for pair, stated in plan.shock_pairs.items()}
 
-    def finish_lane(self, first_path: int, probes: NDArray, pools: Sequence[NDArray], prints: NDArray) -> None:
+    def finish_lane(
+        self, first_path: int, probes: NDArray, pools: Sequence[NDArray], prints: NDArray, related: Sequence[NDArray]
+    ) -> None:
         """Take what a lane has kept by path: values at probes, averages over steps, fingerprints (paths, series)."""
         plan = self.plan
         self.paths += len(probes)
@@ -145,6 +150,8 @@ class Gather:
         for powers, averages in zip(self.pooled, pools, strict=True):
             if powers is not None:
                 powers.absorb(averages)
+        for powers, averages in zip(self.related, related, strict=True):
+            powers.absorb(averages)
 
     def merge(self, other: Gather) -> None:
         """Add the sums of the paths that follow."""
@@ -154,6 +161,8 @@ class Gather:
         for ours, theirs in zip(self.pooled, other.pooled, strict=True):
             if ours is not None and theirs is not None:
                 ours.merge(theirs)
+        for own, others in zip(self.related, other.related, strict=True):
+            own.merge(others)
         for name, gap in other.gaps.items():
             self.gaps[name] = max(self.gaps.get(name, gap), gap)
         self.stopped |= other.stopped
@@ -198,6 +207,7 @@ class Gather:
 
     def _powers(self) -> list[Powers]:
         found = [self.deviations, self.products, self.crossed, *(p for p in self.pooled if p is not None)]
+        found += self.related
         found += [powers for e in self.errors.values() for powers in (e.powers, e.beside)]
         return found + [each.powers for each in self.squares.values()]
 

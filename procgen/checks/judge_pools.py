@@ -27,12 +27,15 @@ def pooled_checks(gather: Gather, column: int) -> Iterator[Check]:
         probe = f"steps {pool.first}–{pool.last - 1}"
         yield Check(plan.name, "averages over steps", probe, "memory", outcome="untestable", note=pool.coarse)
     else:
-        yield from _pooled(plan, pool, powers)
+        yield from averages(plan, powers)
     if plan.name not in gather.routes:
         yield from _neighbours(plan, powers)
 
 
-def _pooled(plan: SeriesPlan, pool: Pool, powers: Powers) -> Iterator[Check]:
+def averages(plan: SeriesPlan, powers: Powers) -> Iterator[Check]:
+    """Every check of averages along paths; the plan must have a pool."""
+    pool = plan.pool
+    assert pool is not None
     for k, lag in enumerate((-1, *pool.lags)):
         sample = sample_of(powers, k)
         if sample.n:

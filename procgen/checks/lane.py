@@ -19,6 +19,7 @@ from procgen.checks.gather import Gather, Plan
 from procgen.checks.pools import PoolLane
 from procgen.checks.probes import SeriesPlan
 from procgen.checks.rectangles import Blocks, Values, first_values
+from procgen.checks.relations import RelationLane
 from procgen.checks.tree import Tree, ranges
 from procgen.ensemble.plan import Block
 
@@ -38,6 +39,7 @@ class Lane:
         self.rest: dict[str, NDArray] = {}  # steps behind the last multiple of 64
         self.probes = np.full((paths, plan.offset[-1]), np.nan)
         self.pools = [PoolLane(p.pool, paths) if p.pool else None for p in plan.series]
+        self.relations = [RelationLane(relation, paths) for relation in plan.relations]
         self.prints = np.zeros((len(plan.series), paths), dtype=np.uint64)
         self.carriers = {name: way.start(first_path, paths) for name, way in self.sums.routes.items()}
         self.shocks = {name: sums.lane(paths) for name, sums in self.sums.shocks.items()}
@@ -56,8 +58,14 @@ class Lane:
         at, rest, self.rest = -held, self.rest, {}
         while at < whole - held:
             count = min(self.height, whole - held - at)
+            related = {}
             for column, name in enumerate(self.plan.names):
-                self._series(column, _tile(rest.get(name), values[name], at, count))
+                x = _tile(rest.get(name), values[name], at, count)
+                self._series(column, x)
+                if any(name in relation.weights for relation in self.plan.relations):
+                    related[name] = x
+            for relation in self.relations:
+                relation.absorb(related, self.step)
             self._pairs(count)
             self.step += count
             at += count
@@ -113,7 +121,8 @@ class Lane:
     def finish(self) -> Gather:
         """The sums, after the last step."""
         pools = [np.zeros((0, 0)) if pool is None else pool.averages() for pool in self.pools]
-        self.sums.finish_lane(self.first_path, self.probes, pools, self.prints.T.copy())
+        related = [relation.pool.averages() for relation in self.relations]
+        self.sums.finish_lane(self.first_path, self.probes, pools, self.prints.T.copy(), related)
         for kind in ("shocks", "errors", "events", "squares", "cross"):
             for key, sums in getattr(self.sums, kind).items():
                 sums.finish(getattr(self, kind)[key])

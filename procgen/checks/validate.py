@@ -21,6 +21,7 @@ from procgen.checks.judge_shocks import cross_checks, shock_checks
 from procgen.checks.lane import in_one_process
 from procgen.checks.probes import PAIR_LIMIT, SeriesPlan, plan_cross, plan_series
 from procgen.checks.recover import Cannot, Expected, Route, expected, route
+from procgen.checks.relations import plan_relations
 from procgen.checks.special import lumpy
 from procgen.checks.squares import plan_squares
 from procgen.checks.structure import Precision
@@ -141,6 +142,7 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
     unseen = [name for name, way in routes.items() if isinstance(way, Cannot) or way.scores is None]
     squares = {name: found for name in unseen if (found := plan_squares(th[name], steps)) is not None}
     whole = Plan(steps, series, precision, plan_cross(series, th.cross), routes, pairs, squares, gaps)
+    whole.relations = plan_relations(graph, th, steps, {plan.name: plan.grain for plan in series})
     return missing.adapted(whole, gaps) if gaps else whole
 
 
@@ -186,6 +188,8 @@ def judged(gather: Gather) -> Iterator[Check]:
             yield from gather.squares[series.name].checks(series.name)
     for place in range(len(plan.cross)):
         yield from cross_moments(gather, place)
+    for relation, powers in zip(plan.relations, gather.related, strict=True):
+        yield from relation.checks(powers)
     pairs = math.comb(len(plan.series), 2)
     if pairs > len(plan.cross):
         note = f"{len(plan.cross)} of the {pairs} pairs of series are compared, the first ones of the spec"

@@ -47,6 +47,7 @@ _CORRELATIONS = {
 }  # how checks end whose estimate is a correlation as long as spreads are as stated -> what it is in any case
 _DRAWN = ": distribution function"  # how the check of a drawn parameter ends
 FARTHEST = "farthest value"
+GAP = " of the gap"  # how the checks end of a combination of series that theory calls steady
 _LEAST_P = math.log(1e-300)  # below this a p is only said to be smaller
 
 
@@ -146,7 +147,8 @@ def _seen(top: Check) -> str:
     if top.probe.startswith("worst"):
         return f"{name_of(top)} is off most at {top.probe.removeprefix('worst: ')}, by {number(top.estimate, 4)} se"
     where = f" at {top.probe}" if top.probe else ""
-    return f"{name_of(top)}{where} is {number(top.estimate, 4)}, stated {number(top.theory, 4)}"
+    between = f" between {joined(top.series.split(' ~ '))}" if top.what.endswith(GAP) else ""
+    return f"{name_of(top)}{between}{where} is {number(top.estimate, 4)}, stated {number(top.theory, 4)}"
 
 
 def _more(group: list[Check]) -> str:
