@@ -32,7 +32,8 @@ PATIENCE = 120.0  # seconds for a scheduler that does not answer to come back
 ANSWER = 10.0  # seconds for a scheduler to answer at first
 AHEAD = 2  # tasks in flight for each thread of the cluster: enough to keep it busy, few for the scheduler to hold
 SLOW = 3.0  # times the median that the last tasks may take before they are begun a second time
-OFTEN = 0.5  # seconds between two reports of rows from one task
+REPORT = 2.0  # seconds between two reports of rows from one task: a thousand workers then send 500 a second
+TURN = 0.5  # seconds after which the progress is shown again
 MUST_AGREE = ("procgen", "numpy", "pyarrow", "pandas", "scipy")
 
 
@@ -224,7 +225,7 @@ class _Run:
             if not self.waiting:
                 self._hurry(room)
             with contextlib.suppress(queue.Empty):
-                self._land(*self.ended.get(timeout=OFTEN))
+                self._land(*self.ended.get(timeout=TURN))
             if self.work.progress is not None:
                 self.work.progress(self.done + sum(flight.rows for flight in self.flying.values()), self.work.rows)
 
@@ -281,7 +282,7 @@ class _Run:
         """Begin the last tasks a second time where they take long: one slow machine must not hold up the rest."""
         if not self.took or len(self.flying) * 2 > room:
             return
-        late = time.monotonic() - SLOW * sorted(self.took)[len(self.took) // 2] - OFTEN
+        late = time.monotonic() - SLOW * sorted(self.took)[len(self.took) // 2] - TURN
         for flight in list(self.flying.values()):
             if len(flight.copies) == 1 and flight.begun < late:
                 self._begin(flight)
@@ -326,7 +327,7 @@ def perform(text: str) -> str:
     def tick(more: int) -> None:
         nonlocal rows, said
         rows += more
-        if time.monotonic() > said + OFTEN:
+        if time.monotonic() > said + REPORT:
             said = time.monotonic()
             worker.log_event(message["topic"], {"number": message["number"], "rows": rows})
 
