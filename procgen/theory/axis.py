@@ -64,7 +64,7 @@ class Axis(Volatile, Stating):
         return Expression(self.space, known.constant(float(value)))
 
     def source(self, key: str, law: Any, sd: float) -> Expression:
-        """Independent shocks of a law at the address `key`: `sd` times its unit, its standard deviation if it has one."""
+        """Independent shocks of a law at the address `key`: `sd` times its unit, which is its sd where it has one."""
         variance = float("inf") if law.needs_spread else float(sd) ** 2
         noise = self._noise(self.space.add(Source(key, IID, variance, law, unit=float(sd))))
         return noise if law.points is None else replace(noise, lumpy=True)

@@ -245,7 +245,9 @@ FAMILIES: Mapping[str, Any] = {
     "gaps": {
         "series": {
             "a": [{"missing": {"of": [{"ar": {"phi": 0.6, "sd": 1}}, {"constant": 3}], "share": 0.1}}],
-            "b": [{"missing": {"of": [{"random_walk": {"sd": 0.3}}, {"white_noise": {"sd": 1}}], "share": 0.2, "gap": 6}}],
+            "b": [
+                {"missing": {"of": [{"random_walk": {"sd": 0.3}}, {"white_noise": {"sd": 1}}], "share": 0.2, "gap": 6}}
+            ],
             "c": [{"missing": {"of": [{"ar": {"phi": 0.5, "sd": 1, "law": _T}}], "share": 0.2, "gap": 6}}],
             "d": [{"ar": {"phi": 0.5, "sd": 1}}],
         }
