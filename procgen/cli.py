@@ -303,12 +303,12 @@ def theory(
 
 @app.command(
     short_help="List the terms a spec can use, or explain one.",
-    epilog="\b\nExamples:\n  procgen terms\n  procgen terms garch",
+    epilog="\b\nExamples:\n  procgen terms\n  procgen terms linear\n  procgen terms garch",
 )
 @guarded
 def terms(
     kind: Annotated[
-        str | None, typer.Argument(metavar="[KIND]", help="A term, or a law of shocks.", show_default=False)
+        str | None, typer.Argument(metavar="[KIND]", help="A term, a law, or a family of terms.", show_default=False)
     ] = None,
 ) -> None:
     """List the terms a spec can use, or say what is known of one: parameters, example, theory, source."""

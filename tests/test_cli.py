@@ -202,14 +202,17 @@ def test_validate_reads_a_strangers_table_by_its_own_names(rendered, tmp_path):
     assert "expected SERIES=NAME such as load_kw=load, got 'flow'" in Result(*call, "--series-col", "flow").err
 
 
-def test_terms_have_a_line_each_and_every_one_has_a_page():
+def test_terms_fit_on_a_screen_and_every_one_has_a_line_and_a_page():
     from procgen.chance.laws import LAWS
     from procgen.terms import catalogue
 
     screen = Result("terms").out
-    families = {term.family for term in catalogue().values()}
-    assert len(screen.splitlines()) <= len(catalogue()) + 2 * len(families) + 8  # a few lines of laws
-    assert max(map(len, screen.splitlines())) <= 100
+    assert len(screen.splitlines()) <= 45 and max(map(len, screen.splitlines())) <= 80
+    for family in {term.family for term in catalogue().values()} - set(catalogue()):  # regimes are a term, too
+        lines = Result("terms", family).out.splitlines()
+        assert lines == Result("terms", family.split()[0]).out.splitlines() and max(map(len, lines)) <= 100
+        kinds = [kind for kind, term in catalogue().items() if term.family == family]
+        assert [line.split()[0] for line in lines[1:]] == kinds
     for name in [*catalogue(), *LAWS]:
         assert name in screen
         page = Result("terms", name)

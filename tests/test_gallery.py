@@ -93,7 +93,7 @@ def test_the_example_of_a_term_draws_and_its_page_tells_all_parameters(kind):
 
 
 def test_the_nearest_name_is_offered():
-    with pytest.raises(catalogue.UnknownName, match=r"there is no term or law grach; did you mean garch\?"):
+    with pytest.raises(catalogue.UnknownName, match=r"there is no term, law or family grach; did you mean garch\?"):
         catalogue.page("grach")
 
 

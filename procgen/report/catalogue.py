@@ -13,6 +13,7 @@ from procgen.spec.words import did_you_mean
 from procgen.terms import catalogue
 
 STANDARD = "a law has mean 0 and variance 1 before it is scaled by sd"
+FAMILY = 20  # letters of the longest family, and a gap
 SHOCK = "any noise-like term in place of sd, total_sd and law"
 
 
@@ -20,38 +21,49 @@ class UnknownName(ValueError):
     """A name that the catalogue does not have; the message gives the nearest one."""
 
 
-def screen(width: int = 100) -> str:
-    """Every kind of term by family, one line each, and the laws."""
-    lines: list[str] = []
-    pad = max(len(kind) for kind in catalogue()) + 4
-    family = None
+def screen(width: int = 80) -> str:
+    """The names of all terms by family, and the laws: one screen."""
+    lines = [_hanging(name, ", ".join(kinds), FAMILY, width) for name, kinds in families().items()]
+    lines += ["", _hanging("laws of a shock", ", ".join(LAWS), FAMILY, width)]
+    more = [("procgen terms FAMILY", "what each of its terms is, such as linear, or level for level and shape")]
+    more += [("procgen terms NAME", "all of a term or law: parameters, equation, theory, an example that runs")]
+    return "\n".join([*lines, "", *(_hanging(name, text, FAMILY + 4, width) for name, text in more)])
+
+
+def families() -> dict[str, list[str]]:
+    """The kinds of term by family."""
+    found: dict[str, list[str]] = {}
     for kind, term in catalogue().items():
-        if term.family != family:
-            family = term.family
-            lines += ["", family]
-        brief = shorten(re.split("[:;] ", term.purpose)[0], width - pad, placeholder=" …")
+        found.setdefault(term.family, []).append(kind)
+    return found
+
+
+def family_page(name: str, width: int = 100) -> str:
+    """The terms of a family, one line each."""
+    kinds = families()[name]
+    pad = max(len(kind) for kind in kinds) + 4
+    lines = [name]
+    for kind in kinds:
+        brief = shorten(re.split("[:;] ", catalogue()[kind].purpose)[0], width - pad, placeholder=" …")
         lines.append(f"  {kind}".ljust(pad) + brief)
-    lines += [
-        "",
-        "laws of a shock",
-        fill(", ".join(LAWS), width, initial_indent="  ", subsequent_indent="  "),
-    ]
-    lines += ["", "procgen terms NAME says more; of a term with an example that runs."]
-    return "\n".join(lines[1:])
+    return "\n".join(lines)
 
 
 def page(name: str, width: int = 100) -> str:
-    """One term or law: purpose, equation, parameters, an example that runs, what theory knows, source.
+    """One term or law: purpose, equation, parameters, an example that runs, what theory knows, source; or a family.
 
-    Raises UnknownName with the nearest name when there is no such term or law.
+    A family may go by its first word. Raises UnknownName with the nearest name when there is nothing of the name.
     """
     if name in catalogue():
         return _term_page(name, width)
     if name in LAWS:
         return _law_page(name, width)
-    known = [*catalogue(), *LAWS]
+    for family in families():
+        if name in (family, family.split()[0]):
+            return family_page(family, width)
+    known = [*catalogue(), *LAWS, *families()]
     hint = did_you_mean(name, known)
-    raise UnknownName(f"there is no term or law {name}; {hint or 'the names are: ' + ', '.join(known)}")
+    raise UnknownName(f"there is no term, law or family {name}; {hint or 'the names are: ' + ', '.join(known)}")
 
 
 def example_spec(kind: str) -> str:
