@@ -30,6 +30,7 @@ from procgen.spec.domains import (
 )
 from procgen.spec.model import Frozen
 from procgen.spec.tree import Tree
+from procgen.spec.varying import VaryingLaw, found_in, tried
 from procgen.spec.words import did_you_mean, nearest, one_of, unknown_key
 
 __all__ = [
@@ -149,14 +150,16 @@ class LawOf(Domain):
         law = reader.laws.get(name)
         if law is None:
             return reader.expected(tree, one_of(sorted(reader.laws)), did_you_mean(name, reader.laws))
-        values = self._parameters(law, inner, tree, reader.closed())
+        values = self._parameters(law, inner, tree, reader.by_series())
         if values is INVALID:
             return INVALID
         try:
-            return law(**values)
+            for numbers, _ in tried(values):
+                made = law(**numbers)
         except ValueError as error:
             reader.fault(tree if inner is None else inner, str(error))
             return INVALID
+        return VaryingLaw(law, values) if found_in(values) else made
 
     def _parameters(self, law: Any, inner: Tree | None, tree: Tree, reader: Reading) -> Any:
         if inner is None:

@@ -110,7 +110,7 @@ class _Terms:
         also = ("shock",) if self.kind.takes_shock else ()
         before, varying = len(self.reader.faults), len(self.reader.made)
         values = read_each(inner, self.kind.parameters, self._reader_of_bodies(given), also, optional)
-        if len(self.reader.made) - varying > _varying_in(values):
+        if INVALID not in values.values() and len(self.reader.made) - varying > _varying_in(values):
             self.reader.fault(inner, "a number in here cannot vary: it is not one that a path could have for itself")
         if one_spread and inner.is_map:
             self._one_spread(inner, spread)

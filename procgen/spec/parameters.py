@@ -34,6 +34,7 @@ class Known:
     declared: Mapping[str, Varying] = field(default_factory=dict)
     row: Mapping[str, Any] = field(default_factory=dict)  # of the group's table
     series: str = ""  # the member of a group that is read
+    by_path: bool = True  # whether a number may differ from path to path
 
 
 def read_section(tree: Tree, reader: Reading) -> dict[str, Varying]:
@@ -103,6 +104,10 @@ def read_varying(tree: Tree, domain: Real, reader: Reading, known: Known | None)
         return INVALID
     if not isinstance(found, Varying):
         return _number(found, tree, domain, reader, known)
+    if found.over == PATH and not known.by_path:
+        why = "the numbers of a law cannot vary by path, for the shocks of a term have one law"
+        reader.fault(tree, f"{why}; write over: series, or {domain.describe()}")
+        return INVALID
     if not found.law.fits(domain):
         reader.fault(tree, f"expected {domain.describe()}, got {_reach(found, domain)}")
         return INVALID

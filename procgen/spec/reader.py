@@ -99,6 +99,10 @@ class Reader:
         """Return a reader of numbers that cannot vary."""
         return self.open(None)
 
+    def by_series(self) -> Reader:
+        """Return a reader of numbers that can vary by series, and not by path."""
+        return self.open(self.known and replace(self.known, by_path=False))
+
     def open(self, known: Known | None) -> Reader:
         """Return a reader of numbers that can be what is known by name."""
         other = copy.copy(self)
@@ -151,11 +155,7 @@ def read_raw(
 
 
 def _read(
-    tree: Tree | None,
-    faults: list[Fault],
-    catalogue: Mapping[str, Any],
-    laws: Mapping[str, Any],
-    file: str | None,
+    tree: Tree | None, faults: list[Fault], catalogue: Mapping[str, Any], laws: Mapping[str, Any], file: str | None
 ) -> Spec:
     spec = None if tree is None else _checked(tree, faults, catalogue, laws, file)
     if faults or spec is None:

@@ -5,10 +5,12 @@ from __future__ import annotations
 from collections.abc import Callable, Container, Iterable, Iterator, Mapping
 from dataclasses import dataclass, replace
 from itertools import product
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
-from procgen.spec.draws import DrawLaw
 from procgen.spec.model import Entry, Frozen, Series, Shared, Spec
+
+if TYPE_CHECKING:
+    from procgen.spec.draws import DrawLaw
 
 PATH, SERIES = "path", "series"
 MOST_TRIALS = 1024
@@ -45,10 +47,37 @@ class Varying:
         return f"{self.name or self.label} ({self.law}, by {self.over})"
 
 
+@dataclass(frozen=True)
+class VaryingLaw:
+    """What stands in place of a law some of whose numbers vary by series: its class, and its values."""
+
+    law: Any
+    values: Values
+
+    @property
+    def needs_spread(self) -> bool:
+        """Whether it has no variance."""
+        return self.law.scaled_by == "spread"
+
+    @property
+    def name(self) -> str:
+        return str(self.law.name)
+
+    def __str__(self) -> str:
+        return self.name
+
+
 def replaced(value: Any, by: Callable[[Varying], Any]) -> Any:
     """Return a value with every Varying in it replaced; the same object where there is none."""
     if isinstance(value, Varying):
         return by(value)
+    if isinstance(value, VaryingLaw):
+        made = [by(varying) for varying in found_in(value.values)]
+        if not made:
+            return value
+        values = replaced(value.values, by)
+        whole = all(isinstance(number, int | float) for number in made)
+        return value.law(**values) if whole else value if values is value.values else VaryingLaw(value.law, values)
     if isinstance(value, tuple):
         parts = tuple([replaced(part, by) for part in value])
         return value if all(a is b for a, b in zip(parts, value, strict=True)) else parts
@@ -78,6 +107,8 @@ def labelled(values: Mapping[str, Any], label: str) -> dict[str, Any]:
 def _labelled(value: Any, label: str) -> Any:
     if isinstance(value, Varying):
         return value if value.name or value.label else replace(value, label=label)
+    if isinstance(value, VaryingLaw):
+        return replace(value, values=_labelled(value.values, label))
     if isinstance(value, tuple):  # the first place goes without a number: a list may grow
         parts = [_labelled(part, label if i == 0 else f"{label}.{i + 1}") for i, part in enumerate(value)]
         return value if all(a is b for a, b in zip(parts, value, strict=True)) else tuple(parts)

@@ -96,8 +96,8 @@ def test_raw_and_digest():
      "only a series of a group has a row of a table; use from_table, or put it under groups:\n"
      "  at series.x[0].white_noise.sd"),
     ({"white_noise": {"sd": 1, "law": {"student_t": {"df": {"parameter": "k"}}}}},
-     "this number cannot vary, numbers of terms can; write a number above 2\n"
-     "  at series.x[0].white_noise.law.student_t.df"),
+     "the numbers of a law cannot vary by path, for the shocks of a term have one law; write over: series, or a number "
+     "above 2\n  at series.x[0].white_noise.law.student_t.df"),
     ({"seasonal": {"period": by_path(UNIFORM), "harmonics": [{"amplitude": 1}]}},
      "period cannot vary, only numbers can; write a length of time above 0: a number of steps, or a text such as "
      "15min, 1d, 2 weeks\n  at series.x[0].seasonal.period"),

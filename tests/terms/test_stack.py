@@ -72,9 +72,9 @@ def spec_of(body):
 
 @pytest.mark.parametrize("name, at", CASES, ids=[f"{name}-{'.'.join(map(str, at))}" for name, at in CASES])
 def test_every_number_of_a_term_may_vary(name, at):
-    """All but those of laws, and lengths of time."""
+    """All but those of laws, which vary by series only, and lengths of time."""
     if "law" in at or "durations" in at:
-        with pytest.raises(SpecError, match="this number cannot vary" if "law" in at else "unknown key draw"):
+        with pytest.raises(SpecError, match="cannot vary by path" if "law" in at else "unknown key draw"):
             spec_of(varied(BODIES[name], at))
         return
     spec = spec_of(varied(BODIES[name], at))
