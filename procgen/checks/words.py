@@ -71,12 +71,15 @@ def number(x: float | None, digits: int = 5) -> str:
 
 
 def p_text(log_p: float) -> str:
-    """p in few letters; below 1e-300, only that it is."""
+    """p in few letters, to the nearest of two digits; below 1e-300, only that it is."""
     if log_p > math.log(1e-4):
         return f"{math.exp(log_p):.4f}"
     if log_p < _LEAST_P:
         return "< 1e−300"
-    return f"1e{math.floor(log_p / math.log(10)):d}".replace("-", "−")
+    power = math.floor(log_p / math.log(10))
+    digits = f"{math.exp(log_p - power * math.log(10)):.1f}"
+    digits, power = ("1.0", power + 1) if digits == "10.0" else (digits, power)
+    return f"{digits.removesuffix('.0')}e{power:d}".replace("-", "−")
 
 
 def sort_of(row: Check) -> str:

@@ -1,6 +1,7 @@
 """Holm's procedure, outcomes, the JSON shape, and the words."""
 
 import json
+import math
 
 import numpy as np
 import pytest
@@ -8,6 +9,7 @@ from statsmodels.stats.multitest import multipletests
 
 from procgen.checks.judge import Sample, normal_mean, sample_mean, unit
 from procgen.checks.verdict import COLUMNS, Check, Verdict, holm
+from procgen.checks.words import p_text
 
 
 def test_holm_of_four():
@@ -118,8 +120,8 @@ def test_headline_names_series_and_kind_the_largest_first():
     ]
     assert Verdict(rows, 0.001).headline == [
         "z: structure: 1 value is not finite, the first at path 3, step 4",
-        "y: level: the mean is higher than stated (mean at step 4 is 0.03, stated 0, p 1e−198)",
-        "x: spread: the variance is larger than stated (shocks: variance at all steps is 0.012, stated 0, p 1e−33); "
+        "y: level: the mean is higher than stated (mean at step 4 is 0.03, stated 0, p 9.8e−198)",
+        "x: spread: the variance is larger than stated (shocks: variance at all steps is 0.012, stated 0, p 3.6e−33); "
         "also memory, which may follow from it",
     ]
 
@@ -164,9 +166,9 @@ def test_shares_of_events_have_plain_names():
     assert Verdict(rows, 0.001).headline == [
         "x: share of zeros: larger than stated (share of zeros at all steps is 0.37, stated 0.3, p < 1e−300); also "
         "level, which may follow from it",
-        "y: rate of jumps: smaller than stated (rate of jumps at all steps is 0.1, stated 0.2, p 1e−14)",
+        "y: rate of jumps: smaller than stated (rate of jumps at all steps is 0.1, stated 0.2, p 9.4e−14)",
         "z: memory: values follow earlier ones otherwise than stated (share of on after on at all steps is 0.5, stated "
-        "0.6, p 1e−11)",
+        "0.6, p 1.4e−11)",
     ]
 
 
@@ -177,3 +179,8 @@ def test_a_correlation_is_called_so_only_where_it_can_be_one():
         assert f"({name} at lag 1 is " in verdict.headline[0]
         assert f"  {name}  lag 1" in verdict.to_text()
         assert "< 1e−300" in verdict.to_text() and "1e−2" not in verdict.to_text()
+
+
+def test_p_is_rounded_to_two_digits_and_not_down_to_a_power_of_ten():
+    said = [p_text(math.log(p)) for p in (0.00012, 9.9e-6, 9.96e-6, 1.04e-6, 3.14159e-200)]
+    assert said == ["0.0001", "9.9e−6", "1e−5", "1e−6", "3.1e−200"]

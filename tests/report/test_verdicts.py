@@ -114,5 +114,5 @@ def test_a_drawn_parameter_and_squares_are_told_in_words():
     law = Check.of("", "parameter pull: distribution function", "all paths", "law", unit(9.0, 0.02))
     squares = Check.of("y", "slope of squares", "lag 1", "clustering", unit(9.0, 0.02))
     lines = Verdict([law, squares], 0.001).headline
-    assert "(the distribution function of parameter pull is off by up to 0.18, p 1e−19)" in lines[0]
+    assert "(the distribution function of parameter pull is off by up to 0.18, p 2.3e−19)" in lines[0]
     assert "slope of squares on earlier squares at lag 1 is " in lines[1]
