@@ -7,6 +7,7 @@ series, and for any other at most 1/d², or κ/d⁴ with its kurtosis κ (Bonfer
 from __future__ import annotations
 
 import math
+from collections import Counter
 from collections.abc import Callable, Iterator, Sequence
 from typing import Any
 
@@ -17,7 +18,8 @@ from procgen.checks.judge import Finding
 from procgen.checks.verdict import Check
 from procgen.checks.words import FARTHEST, number
 
-KEPT = 32  # values of a series
+COUNTED = 32  # values of a series that are counted, the most that are kept of one value
+KEPT = COUNTED + 1  # one more shows whether there are others than these
 _LEAST = 4.0  # standard deviations, below which a value is of no interest
 _CHUNK = 4096  # steps whose theory is asked for at once
 _OUTSIDE = math.log(0.05)  # of a value that is farther than all values of N should be
@@ -96,8 +98,16 @@ class Reach:
 
 
 def merged(found: Sequence[Far]) -> list[Far]:
-    """The farthest of all, in order."""
-    return sorted(found, reverse=True)[:KEPT]
+    """The farthest of all, in order, of equal values the first COUNTED; whichever are merged first."""
+    kept: list[Far] = []
+    times: Counter[float] = Counter()
+    for far in sorted(found, reverse=True):
+        times[far[3]] += 1
+        if times[far[3]] <= COUNTED:
+            kept.append(far)
+        if len(kept) == KEPT:
+            break
+    return kept
 
 
 def checks(series: str, reach: Reach, known: Sequence[Far], n: int) -> Iterator[Check]:
@@ -108,14 +118,16 @@ def checks(series: str, reach: Reach, known: Sequence[Far], n: int) -> Iterator[
     logs = [math.log(n) + reach.log_chance(far) for far in known]
     outside = sum(log_p < _OUTSIDE for log_p in logs)
     allowed = _reach(reach, first, n)
-    same = outside > 1 and len({far[3] for far in known[:outside]}) == 1
-    alone = (same or outside <= min(KEPT - 1, max(1, n // _RARE))) and first[0] > _ABSURD * allowed
+    absurd = [far[3] for far in known[:outside] if far[0] > _ABSURD * allowed]
+    same = outside > 1 and len(set(absurd)) == 1
+    alone = (same or outside <= min(COUNTED - 1, max(1, n // _RARE))) and first[0] > _ABSURD * allowed
     # A few absurd values, or one that stands for all, are a fault of the data; others speak of the law.
     kind = "structure" if alone or not outside else "law"
     finding = Finding(first[4], first[3], first[5], min(0.0, logs[0]), _detect(reach, first, n))
     check = Check.of(series, FARTHEST, f"path {-first[1]}, step {-first[2]}", kind, finding)
     if outside:
-        many = "one value" if outside == 1 else f"{outside} values" if outside < KEPT else f"at least {KEPT} values"
+        some = f"{outside} values" if outside < COUNTED else f"at least {COUNTED} values"
+        many = "one value" if outside == 1 else some
         each = "" if outside == 1 else "such as " if same else "the farthest "
         check.note = (
             f"{many} {'far ' if alone else ''}outside what the law allows: {each}{check.probe}, value "

@@ -136,3 +136,11 @@ def test_heavier_tails_are_a_matter_of_the_law():
     normal, heavy = [{"white_noise": {"sd": 1}}], [{"white_noise": {"sd": 1, "law": {"student_t": {"df": 5}}}}]
     found = verdict(normal, draw(spec_of(heavy, 400, 200, 3)))
     assert found.headline[0].startswith("x: law: ")
+
+
+def test_many_values_that_differ_are_not_taken_for_a_mark():
+    values = draw(spec_of(AR, 400, 200, 3))
+    values["x"] = np.tile(1e3 * np.arange(200.0), (400, 1))  # the 400 farthest are one value, those of the last step
+    verdict_of_all = verdict(AR, values)
+    assert verdict_of_all.agrees is False
+    assert "as if it marked" not in "".join(row.note for row in verdict_of_all.rows)
