@@ -148,6 +148,9 @@ class Table:
                 f"is the right column taken for the step? {_option('step')}"
             )
         self.rows = self.paths * self.steps
+        self.short = _absent_steps(self.steps, spec.time.steps)
+        if self.short:
+            self._say("steps", self.short, "reported")
         if names.path is None and len(np.unique(step)) < len(step):
             raise TableError(
                 f"{where}: steps repeat, and there is no column path; {listed('path', names.found)}; "
@@ -167,6 +170,7 @@ class Table:
             "digest": None,
             "spec_digest": self.spec.digest(),
             "where": self.where,
+            "judged_on": self.short,
         }
 
     def gathered(self, workers: int | None, progress: Progress | None, scheduler: str | None = None) -> Gather:
@@ -311,6 +315,14 @@ def _cell(column: pd.Series, row: int) -> str:
     """A cell as it is written."""
     value = column.iloc[row]
     return repr(value) if isinstance(value, str) else str(value)
+
+
+def _absent_steps(steps: int, stated: int) -> str:
+    """What is said where the last steps of a spec are in no path of a table."""
+    if steps >= stated:
+        return ""
+    last = f"step {steps} is" if steps == stated - 1 else f"steps {steps}–{stated - 1} are"
+    return f"{last} absent; judged on {many(steps, 'step')}"
 
 
 def _looks_like_times(column: pd.Series) -> bool:

@@ -147,7 +147,8 @@ class Verdict:
 
     @property
     def title(self) -> str:
-        return title(self.verdict, self.coverage)
+        part = self.about.get("judged_on")
+        return title(self.verdict, self.coverage) + (f" ({part})" if part else "")
 
     @property
     def checks(self) -> Any:

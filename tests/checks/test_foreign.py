@@ -284,3 +284,10 @@ def test_paths_are_named_as_the_table_names_them(frame):
     lines = "\n".join(validate(table, SPEC).headline)
     assert "y: one value far outside what the law allows: path run-001, step 7, value 1e+09 (" in lines
     assert "bit for bit, such as paths run-003 and run-008" in lines
+
+
+def test_steps_that_no_path_has_are_said_in_the_first_line(frame):
+    verdict = validate(frame[frame["step"] < 40], SPEC)
+    assert verdict.agrees is True
+    assert verdict.title.endswith(" (steps 40–59 are absent; judged on 40 steps)")
+    assert "judged_on" in verdict.about and "absent" not in validate(frame, SPEC).title
