@@ -15,6 +15,13 @@ if TYPE_CHECKING:
 
 _DAY_FIRST = re.compile(r"\s*(\d{1,2})[/.\-](\d{1,2})[/.\-](\d{4}|\d{2})\b(.*)")
 _UNITS = ((86_400_000_000, "day"), (3_600_000_000, "h"), (60_000_000, "min"), (1_000_000, "s"))
+_NUMBERS: tuple[tuple[float, float, str, str, Any, Any], ...] = (
+    (15_000, 80_000, "a day number of a spreadsheet", "unit='D', origin='1899-12-30'", "D", "1899-12-30"),
+    (1e8, 1e10, "seconds since 1970", "unit='s'", "s", "unix"),
+    (1e11, 1e13, "milliseconds since 1970", "unit='ms'", "ms", "unix"),
+    (1e14, 1e16, "microseconds since 1970", "unit='us'", "us", "unix"),
+    (1e17, 9e18, "nanoseconds since 1970", "unit='ns'", "ns", "unix"),
+)  # from, below, what a number of this size looks like, how pandas is told so, its unit and origin
 _ZONES = 14 * 3_600_000_000  # microseconds, the farthest that a zone is from UTC
 
 
@@ -50,6 +57,7 @@ class Times:
             given = repr(value) if isinstance(value, str) else str(value)
             raise NoTime(f"{given} in row {row} of {column.name} is no time")
         naive = times.dt.tz is None
+        self.only_dates = naive and bool((times.dt.normalize() == times).all())
         self.utc = _microseconds(times.dt.tz_localize("UTC") if naive else times)[codes]
         self.local: NDArray[np.int64] | None = None
         if naive and zone:
@@ -71,6 +79,24 @@ class Times:
             )
 
 
+def refuse_numbers(column: pd.Series) -> None:
+    """NoTime for a column of numbers, with what they look like and how to make times of them."""
+    if column.dtype.kind not in "iuf" or not len(column):
+        return
+    first = column.iloc[0]
+    looks = ""
+    for low, high, what, how, unit, origin in _NUMBERS:
+        if low <= first < high:
+            import pandas as pd
+
+            at = pd.to_datetime(first, unit=unit, origin=origin).round("s").isoformat()
+            looks = (
+                f"; it looks like {what}, which would be {at}: convert with pandas.to_datetime(…, {how}) and give "
+                f"validate the DataFrame, or write times as text such as {at}"
+            )
+    raise NoTime(f"{first} in row 0 of {column.name} is a number, not a time{looks}")
+
+
 def _microseconds(times: pd.Series) -> NDArray[np.int64]:
     return times.dt.tz_convert("UTC").dt.tz_localize(None).to_numpy().astype("datetime64[us]").astype(np.int64)
 
@@ -81,6 +107,8 @@ def steps_on_grid(times: Times, time: Any) -> NDArray[np.int64]:
     Raises ClockError when some are no steps of it.
     """
     grid = _grid(time, time.steps)
+    if _lacks_hours(times, grid):
+        raise ClockError(f"{_no_hours(times, time)}, or name a column of whole steps with --step-col NAME")
     step, on = _placed(grid, times.utc)
     if not on.all() and times.local is not None:
         moved, fits = _placed(grid, times.local)
@@ -114,6 +142,8 @@ def mismatch(times: Times, step: NDArray[np.int64], time: Any) -> str:
 
 def difference(grid: NDArray[np.int64], times: Times, time: Any) -> str:
     """What the grid of a spec is, and what the times are instead."""
+    if _lacks_hours(times, grid):
+        return _no_hours(times, time)
     seen = np.unique(times.utc)
     zone = f", or else as {time.zone}" if times.local is not None else ""
     count, unit = time.every
@@ -129,6 +159,21 @@ def difference(grid: NDArray[np.int64], times: Times, time: Any) -> str:
         elif shift % 900_000_000 == 0 and abs(shift) <= _ZONES:
             text += " (another time zone?)"
     return text + (f"; times without a zone are read as UTC{zone}" if zone else "")
+
+
+def _lacks_hours(times: Times, grid: NDArray[np.int64]) -> bool:
+    """Whether all times are midnights of several days, on a grid that has other hours."""
+    halves = _UNITS[0][0] // 2  # a day on which clocks change is shorter than 24 h, and no hour is missing in it
+    return bool(times.only_dates and (np.diff(grid) <= halves).any() and np.ptp(times.utc) > 0)
+
+
+def _no_hours(times: Times, time: Any) -> str:
+    count, unit = time.every
+    day = _stamp(times.utc[0])[:10]
+    return (
+        f"times in {times.column.name} have no hour, only dates such as {day}, where the spec has a step every "
+        f"{count} {unit}; write them with hours, such as {day}T06:00"
+    )
 
 
 def _on_the_wall(grid: NDArray[np.int64], zone: str) -> NDArray[np.int64]:

@@ -16,11 +16,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.checks.blocks import GROUP
-from procgen.checks.clock import ClockError, NoTime, Times, mismatch, steps_on_grid
+from procgen.checks.clock import ClockError, NoTime, Times, mismatch, refuse_numbers, steps_on_grid
+from procgen.checks.files import TableError, read_file
 from procgen.checks.gather import Gather
 from procgen.checks.lane import Progress, in_one_process
 from procgen.checks.verdict import Check
-from procgen.checks.words import many
+from procgen.checks.words import joined, many
 from procgen.ensemble.plan import Block
 
 if TYPE_CHECKING:
@@ -31,38 +32,9 @@ _DECIMAL_COMMA = re.compile(r"[+-]?[\d.]*,\d+")
 BLOCK = 1 << 22  # values of one series that are handed on at once
 
 
-class TableError(ValueError):
-    """A table that cannot be read as paths of a spec; the message says what was expected and what is there."""
-
-
 def read_table(path: Path, spec: Any, columns: Mapping[str, str] | None) -> Table:
     """The table in a CSV or Parquet file; only the columns that are needed are read."""
-    import pandas as pd
-
-    if not path.exists():
-        raise TableError(f"there is no file {path}")
-    suffix = path.suffix.lower()
-    try:
-        if suffix in (".parquet", ".pq"):
-            import pyarrow.parquet as pq
-
-            wanted = Names(pq.read_schema(path).names, spec, columns, path.name)
-            frame = pq.read_table(path, columns=wanted.all).to_pandas(ignore_metadata=True)
-        elif suffix in (".csv", ".tsv", ".txt", ".gz"):
-            separator = "\t" if ".tsv" in path.suffixes else ","
-            head = pd.read_csv(path, sep=separator, nrows=0)
-            if len(head.columns) == 1 and ";" in str(head.columns[0]):  # as written where the comma is the decimal sign
-                separator = ";"
-                head = pd.read_csv(path, sep=separator, nrows=0)
-            wanted = Names(list(head.columns), spec, columns, path.name)
-            frame = pd.read_csv(path, sep=separator, usecols=wanted.all, low_memory=False)
-        else:
-            raise TableError(f"expected a .csv or .parquet file, got {path.name}")
-    except TableError:
-        raise
-    except Exception as error:  # pandas and pyarrow raise whatever their parsers do
-        reason = str(error).strip().splitlines()[0] if str(error).strip() else type(error).__name__
-        raise TableError(f"{path} cannot be read: {reason}") from None
+    frame, wanted = read_file(path, lambda found: Names(found, spec, columns, path.name))
     return Table(frame, wanted, spec, str(path))
 
 
@@ -95,7 +67,13 @@ class Names:
 
     def _pick(self, role: str, given: Mapping[str, str], needed: bool) -> Any:
         name = given.get(role, role)
-        if name in self.found:
+        places = [str(k) for k, found in enumerate(self.found, 1) if found == name]
+        if len(places) > 1:
+            raise TableError(
+                f"{self.where} has {len(places)} columns named {name!r}, columns {joined(places)}; rename or drop all "
+                f"but the one for {role}"
+            )
+        if places:
             return name
         if needed or role in given:
             from procgen.spec.words import did_you_mean
@@ -233,9 +211,11 @@ class Table:
 
     def _timed(self, column: pd.Series) -> NDArray[np.int64]:
         try:
-            times = Times(column, self.spec.time.zone)
             if self.spec.time.start is None:
+                times = Times(column, self.spec.time.zone)
                 return np.unique(times.utc, return_inverse=True)[1].astype(np.int64)
+            refuse_numbers(column)
+            times = Times(column, self.spec.time.zone)
             return steps_on_grid(times, self.spec.time)
         except NoTime as error:
             other = f"{_option('time')}, or one of whole steps with --step-col NAME"

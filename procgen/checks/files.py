@@ -1,0 +1,175 @@
+"""Tables in files: CSV and Parquet read as DataFrames, and what is no such file is told in a sentence, with a repair.
+
+A CSV is looked through before it is read: a line with more fields than the header would be read with its values in
+wrong columns, or some of them dropped.
+"""
+
+from __future__ import annotations
+
+import csv
+import gzip
+import io
+from collections.abc import Callable
+from pathlib import Path
+from typing import TYPE_CHECKING, Any, BinaryIO, Protocol, TypeVar
+
+import numpy as np
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+_PARQUET = (".parquet", ".pq")
+_TEXT = (".csv", ".tsv", ".txt", ".gz")
+_BOOKS = (".xlsx", ".xls", ".ods")
+_MARK = b"PAR1"  # at both ends of a Parquet file (Apache Parquet, file format)
+_CHUNK = 1 << 24  # bytes that are looked through at once
+_HEAD = 1 << 16
+_SEPARATORS = {",": "commas", ";": "semicolons", "\t": "tabs"}
+_AS_FRAME = "and give validate the DataFrame"
+
+
+class TableError(ValueError):
+    """A table that cannot be read as paths of a spec; the message says what was expected and what is there."""
+
+
+class Wanted(Protocol):
+    """Which columns of a file are to be read."""
+
+    all: list[Any]
+
+
+N = TypeVar("N", bound=Wanted)
+
+
+def read_file(path: Path, choose: Callable[[list[str]], N]) -> tuple[pd.DataFrame, N]:
+    """The columns of a file that `choose` wants of those it has, and what it said. Raises TableError."""
+    if not path.exists():
+        raise TableError(f"there is no file {path}")
+    suffix = path.suffix.lower()
+    try:
+        if suffix in _PARQUET:
+            return _parquet(path, choose)
+        if suffix in _TEXT:
+            return _text(path, choose)
+    except TableError:
+        raise
+    except gzip.BadGzipFile:
+        raise TableError(f"{path} is not compressed with gzip; if it is text, give it a name without .gz") from None
+    except UnicodeDecodeError as error:
+        raise TableError(
+            f"{path} is not UTF-8: byte {error.object[error.start]:#04x} is no part of a letter; save it as UTF-8, or "
+            f"read it with pandas.read_csv(…, encoding='cp1252') or whatever it is written in, {_AS_FRAME}"
+        ) from None
+    except Exception as error:  # pandas and pyarrow raise whatever their parsers do
+        reason = str(error).strip().splitlines()[0] if str(error).strip() else type(error).__name__
+        raise TableError(f"{path} cannot be read: {reason}") from None
+    book = "; save the sheet as CSV" if suffix in _BOOKS else ""
+    raise TableError(f"expected a .csv, .tsv or .parquet file, got {path.name}{book}")
+
+
+def _parquet(path: Path, choose: Callable[[list[str]], N]) -> tuple[pd.DataFrame, N]:
+    import pyarrow.parquet as pq
+
+    with path.open("rb") as file:
+        first = file.read(len(_MARK))
+        file.seek(max(path.stat().st_size - len(_MARK), 0))
+        last = file.read()
+    if not first:
+        raise TableError(f"{path} is empty; expected a Parquet file")
+    if first != _MARK:
+        raise TableError(
+            f"{path} is no Parquet file, for it does not begin with {_MARK.decode()}; if it is text, give it a name "
+            f"that ends in .csv, else write it again"
+        )
+    if last != _MARK:
+        raise TableError(f"{path} is cut off: a Parquet file ends with {_MARK.decode()}; write or copy it again")
+    wanted = choose(pq.read_schema(path).names)
+    return pq.read_table(path, columns=wanted.all).to_pandas(ignore_metadata=True), wanted
+
+
+def _text(path: Path, choose: Callable[[list[str]], N]) -> tuple[pd.DataFrame, N]:
+    import pandas as pd
+
+    with _opened(path) as file:
+        _refuse_other_files(path, file.read(_HEAD))
+    separator, header = _header(path)
+    wanted = choose([name or f"Unnamed: {k}" for k, name in enumerate(header)])
+    _refuse_long_lines(path, separator, len(header))
+    return pd.read_csv(path, sep=separator, usecols=wanted.all, low_memory=False), wanted
+
+
+def _opened(path: Path) -> BinaryIO:
+    return gzip.open(path) if path.suffix.lower() == ".gz" else path.open("rb")  # type: ignore[return-value]
+
+
+def _refuse_other_files(path: Path, head: bytes) -> None:
+    """TableError for what is no UTF-8 text, from its first bytes."""
+    said = ""
+    if not head.strip(b"\xef\xbb\xbf \t\r\n"):
+        said = "is empty; expected a line of column names, then a line for each path and step"
+    elif head.startswith((b"\xff\xfe", b"\xfe\xff")) or head[1:8:2] == b"\0\0\0\0" or head[0:8:2] == b"\0\0\0\0":
+        said = f"is UTF-16; save it as UTF-8, or read it with pandas.read_csv(…, encoding='utf-16') {_AS_FRAME}"
+    elif head.startswith(_MARK):
+        said = "is a Parquet file; give it a name that ends in .parquet"
+    elif head.startswith(b"PK\3\4"):
+        said = "is a workbook or a zip archive, not text; save the sheet as CSV, or unpack the archive"
+    elif head.startswith(b"\x1f\x8b"):
+        said = "is compressed with gzip; give it a name that ends in .csv.gz"
+    elif b"\0" in head:
+        said = "is not text, for it holds bytes that are 0; expected CSV, or Parquet in a file named .parquet"
+    if said:
+        raise TableError(f"{path} {said}")
+
+
+def _header(path: Path) -> tuple[str, list[str]]:
+    """The separator and the column names: commas, or else semicolons or tabs, whichever part the first line."""
+    rows = {}
+    for separator in _SEPARATORS:
+        with io.TextIOWrapper(_opened(path), encoding="utf-8-sig", newline="") as lines:  # type: ignore[arg-type]
+            rows[separator] = next(row for row in csv.reader(lines, delimiter=separator) if any(map(str.strip, row)))
+    order = ("\t", ",", ";") if ".tsv" in path.suffixes else tuple(_SEPARATORS)
+    best = next((separator for separator in order if len(rows[separator]) > 1), order[0])
+    return best, rows[best]
+
+
+def _refuse_long_lines(path: Path, separator: str, expected: int) -> None:
+    """TableError for the first line with more fields than the header."""
+    number = 0
+    with _opened(path) as file:
+        while chunk := file.read(_CHUNK):
+            chunk += file.readline()
+            if b'"' in chunk or b"\r" in chunk.replace(b"\r\n", b""):  # a field may hold separators and ends of lines
+                break
+            found = _longer(chunk, separator, expected)
+            if found is not None:
+                line = chunk.split(b"\n", found + 1)[found].decode(errors="replace").rstrip("\r")
+                raise _too_long(path, number + found + 1, line.split(separator), separator, expected)
+            number += chunk.count(b"\n")
+        else:
+            return
+    with io.TextIOWrapper(_opened(path), encoding="utf-8-sig", newline="") as lines:  # type: ignore[arg-type]
+        reader = csv.reader(lines, delimiter=separator)
+        for row in reader:
+            if len(row) > expected:
+                raise _too_long(path, reader.line_num, row, separator, expected)
+
+
+def _longer(chunk: bytes, separator: str, expected: int) -> int | None:
+    """The first line of a chunk of whole lines with more fields than expected."""
+    letters = np.frombuffer(chunk, dtype=np.uint8)
+    ends = np.flatnonzero(letters == ord("\n"))
+    cuts = np.searchsorted(np.flatnonzero(letters == ord(separator)), np.append(ends, len(letters)))
+    long = np.flatnonzero(np.diff(cuts, prepend=0) >= expected)
+    return int(long[0]) if long.size else None
+
+
+def _too_long(path: Path, line: int, fields: list[str], separator: str, expected: int) -> TableError:
+    shown = separator.join(fields)
+    shown = repr(shown if len(shown) <= 60 else shown[:59] + "…")
+    mend = "is there a separator too many, or a text with one that does not stand in quotes?"
+    if separator == ",":
+        mend = "write numbers with a decimal point, not a comma, and put text that holds a comma in quotes"
+    return TableError(
+        f"{path}: expected {expected} fields between {_SEPARATORS[separator]} in line {line}, as the header has, got "
+        f"{len(fields)}: {shown}; {mend}"
+    )
