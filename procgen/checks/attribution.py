@@ -11,13 +11,14 @@ import math
 from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING
 
-from procgen.checks.words import FARTHEST, is_signed, sort_of
+from procgen.checks.words import FARTHEST, FARTHEST_SHOCK, is_signed, sort_of
 
 if TYPE_CHECKING:
     from procgen.checks.verdict import Check
 
 _WHOLE_LAW = (
     "law", "shocks: distribution function", "shocks: within the law's ends", "share below", "share of", FARTHEST,
+    FARTHEST_SHOCK,
 )  # fmt: skip
 _SHAPE = "shocks: shape of the law"
 _PRODUCTS = ("shocks: autocorrelation", "shocks: neighbouring paths", "shocks: correlation between series")
@@ -68,7 +69,12 @@ def _of_series(rows: Sequence[Check], sizes: Mapping[str, float]) -> Groups:
 
 
 def _plainest_first(group: list[Check], sizes: Mapping[str, float]) -> list[Check]:
-    """What is off at all steps alike is told before what is off step by step, if it is most of it."""
+    """What is off at all steps alike is told before what is off step by step, if it is most of it.
+
+    A value that is absurd by itself is told before the shock that it is.
+    """
+    if sort_of(group[0]) == FARTHEST:
+        return sorted(group, key=lambda row: row.what != FARTHEST)
     if not group[0].what.endswith((" by step", " by phase")):
         return group
     alike = [row for row in group if is_signed(row) and _gain(row, sizes) >= _LIKE * _gain(group[0], sizes)]

@@ -42,7 +42,7 @@ class Lane:
         self.relations = [RelationLane(relation, paths) for relation in plan.relations]
         self.prints = np.zeros((len(plan.series), paths), dtype=np.uint64)
         self.carriers = {name: way.start(first_path, paths) for name, way in self.sums.routes.items()}
-        self.shocks = {name: sums.lane(paths) for name, sums in self.sums.shocks.items()}
+        self.shocks = {name: sums.lane(paths, first_path) for name, sums in self.sums.shocks.items()}
         self.errors = {name: sums.lane(paths) for name, sums in self.sums.errors.items()}
         self.events = {name: sums.lane(paths) for name, sums in self.sums.events.items()}
         self.squares = {name: sums.lane(paths) for name, sums in self.sums.squares.items()}
@@ -98,7 +98,7 @@ class Lane:
             if plan.name in sums.events and self.carriers[plan.name] is not None:
                 sums.events[plan.name].absorb(self.carriers[plan.name].seen, self.step, self.events[plan.name])
             if plan.name in sums.shocks:
-                sums.shocks[plan.name].absorb(z, self.step, self.shocks[plan.name])
+                sums.shocks[plan.name].absorb(z, self.step, self.shocks[plan.name], x)
             else:
                 sums.errors[plan.name].absorb(z, self.errors[plan.name])
 

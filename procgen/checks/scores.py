@@ -117,14 +117,14 @@ class Scores:
         from scipy.special import ndtri
 
         tiny = 1e-300
-        below = z < self._median
+        below = z < self.median
         g = np.empty(np.shape(z))
         g[below] = ndtri(np.maximum(self.distribution.cdf(z[below]), tiny))
         g[~below] = -ndtri(np.maximum(self.distribution.sf(z[~below]), tiny))
         return np.clip(g, -_LIMIT, _LIMIT)  # what cannot be must not outweigh all the rest
 
     @cached_property
-    def _median(self) -> float:
+    def median(self) -> float:
         return float(self.distribution.ppf(0.5))
 
     @cached_property

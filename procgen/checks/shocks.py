@@ -13,6 +13,7 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.checks import farthest
 from procgen.checks.blocks import GROUP, Window, across, add_lagged, add_products, scratch
 from procgen.checks.scores import BINS, Scores, cluster_scores
 from procgen.checks.stretches import StretchLane, StretchSums
@@ -30,7 +31,8 @@ class ShockLane:
     `scores` and `clusters` hold the last rows; `view` is that of the scores, the newest tile at its end.
     """
 
-    def __init__(self, paths: int, lags: Sequence[int] = MEMORY_LAGS):
+    def __init__(self, paths: int, lags: Sequence[int] = MEMORY_LAGS, first_path: int = 0):
+        self.first_path = first_path
         self.scores, self.clusters = Window(max(lags), paths), Window(max(CLUSTER_LAGS), paths)
         self.totals = np.zeros((_SINGLE + len(lags) + len(CLUSTER_LAGS), paths))
         self.beside = np.zeros(max(paths - 1, 0))  # products with the left neighbour
@@ -67,6 +69,7 @@ class ShockSums:
     neighbours: float = 0.0
     paths: NDArray = field(default_factory=lambda: np.zeros(5))  # number, sums of level², spread², level, spread
     outside: int = 0  # shocks where the law has none
+    far: list[farthest.Far] = field(default_factory=list)  # the shocks farthest out
 
     def __post_init__(self) -> None:
         self.width = -(-self.steps // PROFILE)
@@ -83,16 +86,16 @@ class ShockSums:
     def stretched(self) -> NDArray:
         return self.stretches.sums
 
-    def lane(self, paths: int) -> ShockLane:
-        return ShockLane(paths, self.lags)
+    def lane(self, paths: int, first_path: int = 0) -> ShockLane:
+        return ShockLane(paths, self.lags, first_path)
 
-    def absorb(self, z: NDArray, first_step: int, lane: ShockLane) -> None:
-        """Add the shocks of a tile, NaN where there is none."""
+    def absorb(self, z: NDArray, first_step: int, lane: ShockLane, x: NDArray | None = None) -> None:
+        """Add the shocks of a tile, NaN where there is none, of the values x."""
         known = np.isfinite(z)
         whole, offset = bool(known.all()), 0
         if not whole and not lane.scores.held:  # nothing is carried so far: it begins with the first shock
             offset = int(np.argmax(known.any(axis=1)))
-            z, known = z[offset:], known[offset:]
+            z, known, x = z[offset:], known[offset:], None if x is None else x[offset:]
             whole = bool(known.all())
             if not known[0].any():
                 return
@@ -100,6 +103,7 @@ class ShockSums:
         lane.length += len(z) if whole else known.sum(axis=0)
         self.outside += self.scores.outside(z)
         g = self.scores.normal_scores(z)
+        self.far = farthest.farthest(g, z, z if x is None else x, lane.first_path, first_step + offset, self.far)
         u = uniforms(g)
         self.counts += bin_counts(u if whole else u[known])
         clusters = cluster_scores(u)
@@ -170,6 +174,7 @@ class ShockSums:
         self.n += other.n
         self.neighbours += other.neighbours
         self.outside += other.outside
+        self.far = farthest.merged([*self.far, *other.far])
         self.chains.update(other.chains)
         self.rows.update(other.rows)
         for name in SHOCK_ARRAYS:

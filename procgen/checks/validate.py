@@ -12,7 +12,7 @@ from typing import Any
 
 import numpy as np
 
-from procgen.checks import missing
+from procgen.checks import farthest, missing
 from procgen.checks.atoms import few_shocks, may_stay
 from procgen.checks.extremes import Reach
 from procgen.checks.gather import Gather, Plan
@@ -250,6 +250,8 @@ def _shocks(gather: Gather, name: str) -> Iterator[Check]:
         yield from gather.events[name].checks(name)
 
 
+    ranks = way.ranked is not None or way.few is not None
+    yield from farthest.checks(name, sums.scores, sums.far, sums.n, noise, ranks)
 def _none_recovered(way: Route, gather: Gather) -> str:
     """Why a way that can be gone has led to no shock, and how many steps would mend it."""
     needed = way.needed(_LONGEST)

@@ -46,7 +46,7 @@ _CORRELATIONS = {
     "clustering": "standardised covariance of sizes",
 }  # how checks end whose estimate is a correlation as long as spreads are as stated -> what it is in any case
 _DRAWN = ": distribution function"  # how the check of a drawn parameter ends
-FARTHEST = "farthest value"
+FARTHEST, FARTHEST_SHOCK = "farthest value", "shocks: farthest"
 GAP = " of the gap"  # how the checks end of a combination of series that theory calls steady
 _LEAST_P = math.log(1e-300)  # below this a p is only said to be smaller
 
@@ -84,7 +84,7 @@ def p_text(log_p: float) -> str:
 
 def sort_of(row: Check) -> str:
     """The kind of a check; for the share of an event that stands for itself, such as jumps, its name."""
-    if row.what == FARTHEST and row.kind == "structure":
+    if row.what in (FARTHEST, FARTHEST_SHOCK) and row.kind == "structure":
         return FARTHEST
     return name_of(row) if row.what.startswith("share: ") and row.kind == "level" else row.kind
 
@@ -119,7 +119,7 @@ def sentence(groups: list[list[Check]]) -> str:
     who = f"{top.series}: " if top.series else ""
     also = ", ".join(sort_of(group[0]) for group in others)
     follow = f"; also {also}, which may follow from it" if also else ""
-    if top.what == FARTHEST:
+    if top.what in (FARTHEST, FARTHEST_SHOCK):
         return f"{who}{top.note}{follow}"
     if top.kind == "structure":
         return f"{who}structure: {top.note}{_more(first)}"

@@ -1,0 +1,116 @@
+"""The shock farthest out in its law: one that is absurd is named, though the value that it made may look harmless.
+
+Shocks are independent and their law is exact, so that of N the least tail area a has the law 1 − (1 − 2a)^N: a value
+that is rare only given its past is found by it, where the law of all values leaves room.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterator, Sequence
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from procgen.checks import judge
+from procgen.checks.judge import Finding
+from procgen.checks.scores import Scores
+from procgen.checks.verdict import Check
+from procgen.checks.words import FARTHEST_SHOCK, number
+
+KEPT = 32  # shocks of a series
+_LEAST = 3.0  # normal scores, below which a shock is of no interest
+_OUTSIDE = math.log(0.05)  # of a shock that is farther out than all N should be
+_APART = 1.2  # times as far as the farthest of N should be
+_SPAN = 12  # steps of a path in which the shocks lie that one wrong value makes
+_CLIPPED = 1e-15  # tail area below which a uniform in double precision, or a clipped score, tells nothing
+
+Far = list[Any]  # size of the normal score, minus step, minus path, shock, value: a list, as JSON has it
+
+
+def farthest(g: NDArray, z: NDArray, x: NDArray, first_path: int, first_step: int, known: Sequence[Far]) -> list[Far]:
+    """The KEPT farthest of those known, of earlier steps, and a tile (steps, paths) of scores g, shocks z, values x.
+
+    Of scores of one size the earlier are kept.
+    """
+    full = len(known) == KEPT
+    least = max(_LEAST, known[-1][0]) if full else _LEAST
+    with np.errstate(invalid="ignore"):
+        rows = np.flatnonzero(np.fmax(np.fmax.reduce(g, axis=1), -np.fmin.reduce(g, axis=1)) > least)
+        if not rows.size:
+            return list(known)
+        sizes = np.abs(g[rows])
+        at, paths = np.nonzero(sizes > least)
+    found = sizes[at, paths]
+    first = np.lexsort((paths, at, -found))[:KEPT]
+    new: list[Far] = []
+    for row, path, size in zip(rows[at[first]].tolist(), paths[first].tolist(), found[first].tolist(), strict=True):
+        new.append([size, -first_step - row, -first_path - path, float(z[row, path]), float(x[row, path])])
+    return merged([*known, *new])
+
+
+def merged(found: Sequence[Far]) -> list[Far]:
+    """The farthest of all, in order."""
+    return sorted(found, key=lambda far: far[:3], reverse=True)[:KEPT]
+
+
+def checks(
+    series: str, scores: Scores, known: Sequence[Far], n: int, noise: float = 0.0, ranks: bool = False
+) -> Iterator[Check]:
+    """Whether the farthest of n shocks is no farther out than chance carries it.
+
+    `noise` is the variance that rounding adds to a shock; `ranks` are uniforms that are as fine as doubles.
+    """
+    if not known:
+        return
+    room = 10.0 * math.sqrt(noise) if noise or ranks or scores.gaussian else scores.room
+    logs = [_of_n(_log_tail(scores, far, room), n) for far in known]
+    best = int(np.argmin(logs))
+    first, log_p = known[best], logs[best]
+    outside = [far for far, log in zip(known, logs, strict=True) if log < _OUTSIDE]
+    size = _score(_log_tail(scores, first, room))
+    alone = bool(outside) and _one_place(outside) and size > _APART * _score(math.log(-math.log1p(-0.05) / (2 * n)))
+    finding = Finding(0.0, math.copysign(size, first[3]), 1.0, log_p, lambda level: judge.reach_of_worst(level, n))
+    check = Check.of(series, FARTHEST_SHOCK, f"path {-first[2]}, step {-first[1]}", "law", finding)
+    if alone:
+        check.kind = "structure"  # a fault of the data; others speak of the law
+    if outside:
+        check.note = (
+            f"{'one shock far' if alone else 'a shock'} outside what the law allows: {check.probe}, value "
+            f"{number(first[4], 6)}, which given its past is as rare as {number(size, 3)} sd of a normal law"
+        )
+    yield check
+
+
+def _one_place(outside: Sequence[Far]) -> bool:
+    """Whether shocks lie so near to each other that one wrong value explains them."""
+    steps = [-far[1] for far in outside]
+    return len({far[2] for far in outside}) == 1 and max(steps) - min(steps) <= _SPAN
+
+
+def _log_tail(scores: Scores, far: Far, room: float) -> float:
+    """Logarithm of the tail area of a shock that is moved inwards by `room`, and no less than can be told."""
+    from scipy.special import log_ndtr
+
+    z = far[3]
+    if scores.gaussian:
+        return float(log_ndtr(-max(abs(z) - room, 0.0)))
+    side = scores.folded(np.array([z]))
+    inwards = side + room if side[0] < scores.median else side - room
+    return max(float(log_ndtr(-abs(scores.normal_scores(inwards)[0]))), math.log(_CLIPPED))
+
+
+def _of_n(log_tail: float, n: int) -> float:
+    """Logarithm of 1 − (1 − 2a)^n."""
+    log_two = math.log(2.0) + log_tail
+    if log_two < -30.0:
+        return min(0.0, log_two + math.log(n))
+    a = math.exp(log_two)
+    return math.log(-math.expm1(n * math.log1p(-a))) if a < 1.0 else 0.0
+
+
+def _score(log_tail: float) -> float:
+    from scipy.special import ndtri_exp
+
+    return -float(ndtri_exp(log_tail))
