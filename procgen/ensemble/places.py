@@ -19,6 +19,7 @@ if TYPE_CHECKING:
     import pyarrow.fs as fs
 
 CHUNK = 8 << 20  # bytes of an upload at a time
+RETRY = {"gs": "retry_limit_seconds=20"}  # where a store that does not answer would be asked for many minutes
 
 
 class Remote:
@@ -134,9 +135,12 @@ def place_of(value: str | os.PathLike[str]) -> Place:
     scheme, _, rest = plain.partition("://")
     if scheme == "file":
         return Path(rest)
+    retry = RETRY.get(scheme, "")
+    if retry and retry.partition("=")[0] not in options:
+        options = f"{options}&{retry}" if options else retry
     options = f"?{options}" if options else ""
     try:
-        store, key = FileSystem.from_uri(text)
+        store, key = FileSystem.from_uri(plain + options)
         root = plain.rstrip("/").removesuffix(key.rstrip("/"))
     except pa.ArrowInvalid as error:
         store, key, root = _by_fsspec(text, plain, str(error))
