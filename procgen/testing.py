@@ -12,7 +12,6 @@ from __future__ import annotations
 
 import hashlib
 import json
-import os
 import sys
 import warnings
 from collections.abc import Iterator, Mapping, Sequence
@@ -174,7 +173,7 @@ def _store(request: pytest.FixtureRequest) -> Path:
     if cache is not None:
         return cache.mkdir("procgen")
     base = request.getfixturevalue("tmp_path_factory").getbasetemp()
-    return (base.parent if "PYTEST_XDIST_WORKER" in os.environ else base) / "procgen"
+    return (base.parent if hasattr(request.config, "workerinput") else base) / "procgen"
 
 
 def _kept(store: Path, digest: str) -> Path | None:

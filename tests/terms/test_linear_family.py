@@ -330,7 +330,7 @@ def test_what_cannot_be_drawn_is_refused_with_the_mend(term, sentence):
 
 def test_a_term_of_several_disturbances_cannot_be_correlated():
     rest = "correlation:\n  - {between: [x.local_level, y.ar], value: 0.5}"
-    with pytest.raises(SpecError, match=r"expected a term that draws shocks, got x\.local_level"):
+    with pytest.raises(SpecError, match=r"^the shocks of x\.local_level are its own and cannot be mixed"):
         graph_of(f"  x: {LEVEL}\n  y: {{ar: {{phi: 0.5, sd: 1}}}}", rest=rest)
 
 
