@@ -114,8 +114,34 @@ def test_ranges_that_overlap_are_compared_where_they_do(folder, tmp_path):
     found = pg.difference(folder / "base", tmp_path / "b")
     assert found.compared == Block(20, 30, 0, 30) and all(one.state == "equal" for one in found.series)
     assert not found.equal  # the ranges differ
+    assert ("range of paths", "0–49", "20–69") in [(one.place, one.old, one.new) for one in found.meaning]
+    shifted = pg.difference(pg.render(folder / "spec.yaml"), pg.render(folder / "spec.yaml", first_path=20))
+    assert "range of paths: 0–49 → 20–69\n" in shifted.text() and "Both mean the same" not in shifted.text()
+    assert "Series: all equal (values compared on paths 20–49, those in both, steps 0–39)" in shifted.text()
+    assert [one["place"] for one in shifted.to_dict()["meaning"]] == ["range of paths"]
     far = pg.difference(pg.render(SPECS := pg.load(folder / "spec.yaml")), pg.render(SPECS, first_path=50))
     assert far.compared is None and "no path is in both" in far.text()
+
+
+def test_missing_values_are_null_in_json_and_paired_where_both_have_a_value():
+    def spec(sd):
+        body = {"missing": {"of": [{"white_noise": {"sd": sd}}], "share": 0.4}}
+        return pg.load({"seed": 3, "paths": 60, "time": {"steps": 6}, "series": {"m": body}})
+
+    a, b = pg.render(spec(1)), pg.render(spec(2))
+    found = pg.difference(a, b)
+
+    def refuse(word):
+        raise AssertionError(f"{word} is not JSON (RFC 8259)")
+
+    data = json.loads(found.to_json(), parse_constant=refuse)
+    both = (~np.isnan(a["m"] + b["m"])).sum(axis=0)
+    assert [row["paths"] for row in data["paired"]] == [both[row["step"]] for row in data["paired"]]
+    assert all(row["change"] is not None and 0 < row["paths"] < 60 for row in data["paired"])
+    assert "(60 paths):" in found.text() and "paths: those on which both have a value at the step" in found.text()
+    gone = pg.difference(a, pg.render(spec(1).set({"series.m.missing.share": 0.8})))
+    first = json.loads(gone.to_json(), parse_constant=refuse)["series"][0]["first"]
+    assert first["a"] is not None and first["b"] is None and "→ missing; by m." in gone.text()
 
 
 def test_layouts_and_parts_do_not_matter(folder, tmp_path):

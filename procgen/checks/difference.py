@@ -76,7 +76,8 @@ class Difference:
     ----------
     a, b : Side
     meaning : tuple of Change
-        Places at which the specs differ in meaning: `.place`, `.old`, `.new`.
+        Places at which the specs differ in meaning: `.place`, `.old`, `.new`; last the range of paths, where the
+        numbers of the first paths differ.
     series : tuple of SeriesDifference
         One for each series of either, in the order of b, those that are gone last.
     compared : Block or None
@@ -120,7 +121,7 @@ class Difference:
             "b": self.b.name,
             "meaning": [dict(vars(change)) for change in self.meaning],
             "series": [
-                {**vars(one), "moved": list(one.moved), "first": None if one.first is None else dict(vars(one.first))}
+                {**vars(one), "moved": list(one.moved), "first": None if one.first is None else one.first.to_dict()}
                 for one in self.series
             ],
             "compared": None if block is None else dict(vars(block)),
@@ -159,13 +160,20 @@ def difference(a: Any, b: Any, at: Sequence[int] | None = None, progress: Tick |
     if left.ensemble is not None and right.ensemble is not None:
         block = common(left.whole, right.whole)
     steps = _steps(at, block or Block(0, 1, 0, min(left.whole.steps, right.whole.steps)))
-    meaning = changes(left.spec, right.spec)
+    meaning = (*changes(left.spec, right.spec), *_ranges(left, right))
     before, after = recipes(left.spec), recipes(right.spec)
     series = [_stated(name, before.get(name), after.get(name)) for name in dict.fromkeys([*after, *before])]
     paired: list[Paired] = []
     if block is not None:
         series, paired = _seen(series, left, right, block, steps, progress)
     return Difference(left, right, meaning, tuple(series), block, tuple(paired))
+
+
+def _ranges(a: Side, b: Side) -> tuple[Change, ...]:
+    """The paths by number, where they do not begin with the same: their count alone would not tell."""
+    if a.whole.first_path == b.whole.first_path:
+        return ()
+    return (Change("range of paths", *(f"{one.first_path}–{one.end_path - 1}" for one in (a.whole, b.whole))),)
 
 
 def _stated(name: str, before: Recipe | None, after: Recipe | None) -> SeriesDifference:

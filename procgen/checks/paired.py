@@ -20,15 +20,16 @@ import numpy as np
 class Paired:
     """A series at a step, in both ensembles: means, and the change from a to b over the paths that both have.
 
-    `standard_error` is None for one path, `correlation` where one of the two does not vary, `saved` where none does.
+    `paths` are those on which both have a value at the step; without any, there are no means. `standard_error` is None
+    for one path, `correlation` where one of the two does not vary, `saved` where none does.
     """
 
     series: str
     step: int
     paths: int
-    mean_a: float
-    mean_b: float
-    change: float
+    mean_a: float | None
+    mean_b: float | None
+    change: float | None
     standard_error: float | None
     correlation: float | None
     saved: float | None
@@ -52,18 +53,22 @@ class Sums:
         self.product = np.zeros(steps)
 
     def add(self, x: np.ndarray, y: np.ndarray, columns: list[int]) -> None:
-        """Take the values of more paths, each (paths, columns), at some of the steps."""
+        """Take the values of more paths, each (paths, columns), at some of the steps; NaN where one is missing."""
         block = np.stack([x, y, y - x])
-        fresh = self.count[columns] == 0
-        self.shift[:, columns] = np.where(fresh, block[:, 0], self.shift[:, columns])
-        block = block - self.shift[:, None, columns]
-        count, mean = block.shape[1], block.mean(axis=1)
-        rest = block - mean[:, None]
+        seen = ~np.isnan(block[2])
+        count = seen.sum(axis=0)
+        fresh = (self.count[columns] == 0) & (count > 0)
+        first = block[:, seen.argmax(axis=0), np.arange(len(columns))]
+        self.shift[:, columns] = np.where(fresh, first, self.shift[:, columns])
+        block = np.where(seen, block - self.shift[:, None, columns], 0.0)
+        mean = block.sum(axis=1) / np.maximum(count, 1)
+        rest = np.where(seen, block - mean[:, None], 0.0)
         total = self.count[columns] + count
-        away, weight = mean - self.mean[:, columns], self.count[columns] * count / total
+        part = count / np.maximum(total, 1)
+        away, weight = mean - self.mean[:, columns], self.count[columns] * part
         self.squares[:, columns] += (rest * rest).sum(axis=1) + away * away * weight
         self.product[columns] += (rest[0] * rest[1]).sum(axis=0) + away[0] * away[1] * weight
-        self.mean[:, columns] += away * (count / total)
+        self.mean[:, columns] += away * part
         self.count[columns] = total
 
     def figures(self, series: str, steps: list[int]) -> list[Paired]:
@@ -72,6 +77,8 @@ class Sums:
 
     def _figure(self, series: str, step: int, i: int) -> Paired:
         n, (mean_a, mean_b, change) = int(self.count[i]), (self.mean + self.shift)[:, i].tolist()
+        if n < 1:
+            return Paired(series, step, 0, None, None, None, None, None, None)
         if n < 2:
             return Paired(series, step, n, mean_a, mean_b, change, None, None, None)
         x, y, d = self.squares[:, i].tolist()

@@ -6,6 +6,7 @@ a path that is too long for that is read in runs of steps.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
 from typing import Any
@@ -36,7 +37,19 @@ class First:
     b: float
 
     def __str__(self) -> str:
-        return f"path {self.path}, step {self.step}: {self.a!r} → {self.b!r}"
+        return f"path {self.path}, step {self.step}: {_shown(self.a)} → {_shown(self.b)}"
+
+    def to_dict(self) -> dict[str, Any]:
+        """The difference as plain data, None for a value that is missing."""
+        return {**vars(self), "a": _or_none(self.a), "b": _or_none(self.b)}
+
+
+def _or_none(value: float) -> float | None:
+    return None if math.isnan(value) else value
+
+
+def _shown(value: float) -> str:
+    return "missing" if math.isnan(value) else repr(value)
 
 
 def common(a: Block, b: Block) -> Block | None:

@@ -11,7 +11,6 @@ from procgen.report.text import CAUTION, table
 
 if TYPE_CHECKING:
     from procgen.checks.difference import Difference, SeriesDifference, Side
-    from procgen.checks.paired import Paired
 
 MOST = 20  # names in one line
 LINES = 60  # of a list; all is in --json
@@ -25,7 +24,7 @@ def difference_text(difference: Difference) -> str:
         lines[-1] = "Both mean the same."
     lines += ["", _headline(difference), *_some([*_series(difference)])]
     if difference.paired:
-        lines += ["", *_paired(difference.paired), "", *wrap(CAUTION, 100)]
+        lines += ["", *_paired(difference), "", *wrap(CAUTION, 100)]
     alone = [one.name for one in difference.series if one.state == "differs" and not one.shares]
     if alone and difference.compared is not None:
         lines += ["", f"no shocks are shared by {', '.join(alone[:MOST])}: independent draws, which cannot be paired"]
@@ -54,12 +53,18 @@ def _headline(difference: Difference) -> str:
     said.append(f"all {'others ' if said else ''}equal" if equal and not counts["differs"] else f"{equal} equal")
     block = difference.compared
     if block is not None:
-        how = f"values compared on paths {block.first_path}–{block.end_path - 1}, steps 0–{block.end_step - 1}"
+        both = ", those in both," if _apart(difference) else ""
+        how = f"values compared on paths {block.first_path}–{block.end_path - 1}{both}"
+        how = f"{how}{'' if both else ','} steps 0–{block.end_step - 1}"
     elif difference.a.ensemble is not None and difference.b.ensemble is not None:
         how = "no path is in both, so that no values could be compared; by what each series depends on"
     else:
         how = "by what each series depends on; nothing drawn"
     return f"Series: {', '.join(said)} ({how})"
+
+
+def _apart(difference: Difference) -> bool:
+    return difference.a.whole.first_path != difference.b.whole.first_path
 
 
 def _series(difference: Difference) -> Iterator[str]:
@@ -82,20 +87,27 @@ def _why(one: SeriesDifference, difference: Difference) -> str:
     return f"first at {one.first}; {because}"
 
 
-def _paired(rows: tuple[Paired, ...]) -> list[str]:
-    """The paired figures as a table, with what its columns are."""
-    head = ("series", "step", "mean of a", "mean of b", "change", "standard error", "correlation", "variance saved")
+def _paired(difference: Difference) -> list[str]:
+    """The paired figures as a table, with what its columns are; paths by row where some have no value in both."""
+    rows = difference.paired
+    every = max(row.paths for row in rows) if difference.compared is None else difference.compared.paths
+    some = any(row.paths < every for row in rows)
+    beside = ("paths",) if some else ()
+    head = ("series", "step", *beside, "mean of a", "mean of b", "change")
+    head = (*head, "standard error", "correlation", "variance saved")
     cells = [
         (
-            row.series, str(row.step), number(row.mean_a), number(row.mean_b), number(row.change),
+            row.series, str(row.step), *(f"{row.paths:,}" for _ in beside),
+            number(row.mean_a), number(row.mean_b), number(row.change),
             number(row.standard_error, 3), number(row.correlation, 4), _share(row.saved),
         )
         for row in rows
     ]  # fmt: skip
     return [
-        f"Paired change from a to b, path by path with the same shocks ({rows[0].paths:,} paths):",
+        f"Paired change from a to b, path by path with the same shocks ({every:,} paths):",
         *("  " + line for line in table(head, cells[:LINES])),
         *(_more(len(cells) - LINES) if len(cells) > LINES else ()),
+        *(["paths: those on which both have a value at the step, of which all figures of the row are"] if some else []),
         "variance saved: of the mean change, against draws of a and b that are independent of each other",
     ]
 

@@ -33,6 +33,26 @@ def test_the_figures_are_those_of_scipy(cuts):
         assert row.paths == 100
 
 
+@pytest.mark.parametrize("cuts", [(), (1, 2, 90), (50,)])
+def test_figures_of_missing_values_are_those_of_scipy_over_the_paths_that_have_both(cuts):
+    rng = np.random.default_rng(4)
+    x = rng.normal(size=(100, 3)) + 1000
+    y = 0.7 * x + rng.normal(size=(100, 3))
+    x[rng.random(x.shape) < 0.3] = np.nan
+    y[rng.random(y.shape) < 0.3] = np.nan
+    x[:, 2] = np.nan
+    rows = figures(x, y, cuts)
+    for row in rows[:2]:
+        both = ~np.isnan(x[:, row.step] + y[:, row.step])
+        a, b = x[both, row.step], y[both, row.step]
+        test = stats.ttest_rel(x[:, row.step], y[:, row.step], nan_policy="omit")
+        assert -row.change / row.standard_error == pytest.approx(test.statistic, rel=1e-10)
+        assert row.correlation == pytest.approx(stats.pearsonr(a, b).statistic, rel=1e-10)
+        assert row.paths == both.sum() < 80 and row.mean_a == pytest.approx(a.mean(), rel=1e-12)
+    none = rows[2]
+    assert none.paths == 0 and (none.mean_a, none.mean_b, none.change, none.saved) == (None,) * 4
+
+
 def test_what_does_not_vary_has_no_correlation_and_no_error_that_rounding_made():
     steady = np.full((7, 1), 0.1)
     row = figures(steady, steady + 0.2, (3,))[0]
