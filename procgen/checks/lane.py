@@ -41,6 +41,7 @@ class Lane:
         self.pools = [PoolLane(p.pool, paths) if p.pool else None for p in plan.series]
         self.relations = [RelationLane(relation, paths) for relation in plan.relations]
         self.prints = np.zeros((len(plan.series), paths), dtype=np.uint64)
+        self.watches = self.sums.structure.watches(first_path, paths)
         self.carriers = {name: way.start(first_path, paths) for name, way in self.sums.routes.items()}
         self.shocks = {name: sums.lane(paths, first_path) for name, sums in self.sums.shocks.items()}
         self.errors = {name: sums.lane(paths) for name, sums in self.sums.errors.items()}
@@ -77,6 +78,8 @@ class Lane:
         plan, sums = self.plan.series[column], self.sums
         if not sums.structure.absorb(column, x, self.first_path, self.step, self.prints[column]):
             x = np.where(np.isfinite(x), x, np.nan)  # named there; from here on the path is left out
+        if column in self.watches:
+            self.watches[column].absorb(x)
         for i in np.flatnonzero((plan.steps >= self.step) & (plan.steps < self.step + len(x))):
             self.probes[:, self.plan.offset[column] + i] = x[plan.steps[i] - self.step]
         if plan.name in self.plan.gaps:
@@ -122,6 +125,7 @@ class Lane:
         """The sums, after the last step."""
         pools = [np.zeros((0, 0)) if pool is None else pool.averages() for pool in self.pools]
         related = [relation.pool.averages() for relation in self.relations]
+        self.sums.structure.watched(self.watches)
         self.sums.finish_lane(self.first_path, self.probes, pools, self.prints.T.copy(), related)
         for kind in ("shocks", "errors", "events", "squares", "cross"):
             for key, sums in getattr(self.sums, kind).items():

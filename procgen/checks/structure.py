@@ -9,7 +9,7 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
-from procgen.checks import extremes
+from procgen.checks import copies, extremes
 from procgen.checks.verdict import Check
 
 _SAMPLE = 61  # every so manieth step's bits are looked at for a detour through float32; at least 32 steps
@@ -28,6 +28,7 @@ class Precision:
     discrete: bool = False  # few values: float32 may hold them all, and paths may be equal
     reach: extremes.Reach | None = None  # how far values may lie from their mean
     gaps: bool = False  # whether values may be missing
+    repeats: copies.Repeats | None = None  # what chance may repeat of it, where that is known to be little
 
 
 @dataclass
@@ -40,6 +41,8 @@ class Structure:
     off_grid: dict[str, list[int]] = field(default_factory=dict)
     narrow: dict[str, list[int]] = field(default_factory=dict)  # series -> [values that fit float32, whole ones, all]
     far: dict[str, list[extremes.Far]] = field(default_factory=dict)  # series -> its values farthest from their mean
+    runs: dict[str, copies.Run] = field(default_factory=dict)  # series -> its longest run of one value
+    marks: dict[str, copies.Marks] = field(default_factory=dict)  # series -> stretches that would show in a copy
     prints: list[tuple[int, NDArray[np.uint64]]] = field(default_factory=list)  # (first path, (paths, series))
 
     def absorb(self, column: int, x: NDArray, first_path: int, first_step: int, prints: NDArray[np.uint64]) -> bool:
@@ -70,6 +73,17 @@ class Structure:
             self.far[what.name] = what.reach.farthest(x, first_path, first_step, self.far.get(what.name, ()))
         return finite
 
+    def watches(self, first_path: int, paths: int) -> dict[int, copies.Watch]:
+        """Of each column whose values chance does not repeat, what is carried for a range of paths."""
+        known = {column: what.repeats for column, what in enumerate(self.series)}
+        return {column: copies.Watch(one, first_path, paths) for column, one in known.items() if one is not None}
+
+    def watched(self, watches: Mapping[int, copies.Watch]) -> None:
+        """Take what was seen of a range of paths."""
+        for column, watch in watches.items():
+            name = self.series[column].name
+            self.runs[name], self.marks[name] = watch.finish()
+
     def close(self, first_path: int, prints: NDArray[np.uint64]) -> None:
         self.prints.append((first_path, prints))
 
@@ -78,10 +92,14 @@ class Structure:
         first = np.array([path for path, _ in self.prints], dtype=np.int64)
         sizes = np.array([len(rows) for _, rows in self.prints], dtype=np.int64)
         none = np.zeros((0, len(self.series)), dtype=np.uint64)
-        return {"first": first, "sizes": sizes, "prints": np.concatenate([none, *(rows for _, rows in self.prints)])}
+        prints = {"first": first, "sizes": sizes, "prints": np.concatenate([none, *(rows for _, rows in self.prints)])}
+        marks = {f"{k} of marks, {name}": x for name, each in self.marks.items() for k, x in enumerate(each.arrays)}
+        return prints | marks
 
     def take_prints(self, arrays: Mapping[str, NDArray]) -> None:
         """Take over what `printed` gave."""
+        for name in self.runs:
+            self.marks[name] = copies.Marks(*(arrays[f"{k} of marks, {name}"] for k in range(4)))
         rows = np.split(arrays["prints"], np.cumsum(arrays["sizes"])[:-1])
         self.prints = list(zip(arrays["first"].tolist(), rows, strict=True)) if len(arrays["first"]) else []
 
@@ -94,6 +112,9 @@ class Structure:
             self.narrow[name] = [a + b for a, b in zip(self.narrow.get(name, [0, 0, 0]), counts, strict=True)]
         for name, values in other.far.items():
             self.far[name] = extremes.merged([*self.far.get(name, ()), *values])
+        for name, run in other.runs.items():
+            self.runs[name] = max(self.runs.get(name, run), run)
+            self.marks[name] = self.marks.get(name, copies.Marks.none()).joined(other.marks[name])
         self.prints += other.prints
 
     def checks(self, chance_of_equal: dict[str, float]) -> Iterator[Check]:
@@ -106,6 +127,7 @@ class Structure:
                 yield from extremes.checks(what.name, what.reach, self.far.get(what.name, ()), n)
         if self.prints:
             yield from self._copies(chance_of_equal)
+            yield from self._repeats()
 
     def _finite(self, what: Precision) -> Check:
         fault, name = "", what.name
@@ -154,6 +176,15 @@ class Structure:
                 many = f"{copies} paths repeat another one" if copies > 1 else "one path repeats another one"
                 fault = f"{many} bit for bit, such as paths {first} and {second}"
             yield Check.fact(what.name, "copied paths", "all pairs", fault, "no two paths are the same")
+
+
+    def _repeats(self) -> Iterator[Check]:
+        paths = np.concatenate([first + np.arange(len(rows)) for first, rows in self.prints])
+        prints = np.concatenate([rows for _, rows in self.prints])
+        for column, what in enumerate(self.series):
+            if what.repeats is not None and what.name in self.runs:
+                run, marks = self.runs[what.name], self.marks[what.name]
+                yield from copies.checks(what.name, what.repeats, run, marks, paths, prints[:, column])
 
 
 def _note(book: dict[str, list[int]], name: str, where: NDArray, first_path: int, first_step: int) -> None:

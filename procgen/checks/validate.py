@@ -14,6 +14,7 @@ import numpy as np
 
 from procgen.checks import farthest, missing
 from procgen.checks.atoms import few_shocks, may_stay
+from procgen.checks.copies import repeats_of
 from procgen.checks.extremes import Reach
 from procgen.checks.gather import Gather, Plan
 from procgen.checks.judge_moments import cross_moments, moment_checks
@@ -137,6 +138,7 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
         random = th[name].random
         reach = Reach(th[name], grain) if random else None
         precision.append(Precision(name, declared.type, declared.decimals, random, lumpy(th[name]), reach))
+        precision[-1].repeats = repeats_of(plan, way, graph, lumpy(th[name])) if random else None
     ways = [way for way in routes.values() if isinstance(way, Route) and way.scores is not None]
     pairs = {(a.series, b.series): expected(a, b, th.axis.space) for a, b in list(combinations(ways, 2))[:PAIR_LIMIT]}
     unseen = [name for name, way in routes.items() if isinstance(way, Cannot) or way.scores is None]

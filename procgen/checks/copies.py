@@ -1,0 +1,201 @@
+"""Values that repeat where chance repeats none: a value that stays, and a stretch of steps that is there twice.
+
+Runs of one value are followed along each path. Of stretches, those that end in a value whose bits say so (about one
+value in 16) are marked by a hash over their values: wherever a stretch is copied to, the same ends are marked (Manber
+1994, Finding similar files in a large file system). Of too many marks the smallest hashes are kept, which again are
+the same in a copy (Broder 1997, On the resemblance and containment of documents).
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterator
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from procgen.checks.verdict import Check
+
+STUCK, COPIED = "values that stay", "copied stretches"
+KEPT = 1 << 17  # marks of a series
+SHORTEST, LONGEST = 4, 32  # values in a marked stretch
+_ENDS = np.uint64(60)  # bits of a hash that are not looked at: one value in 2 ** 4 ends a marked stretch
+_VALUES = 1e10  # as many values as an ensemble may be thought to have
+_CERTAIN = 1e-12  # expected number of repeats by chance below which one is no chance
+_LIKELY = 0.5  # chance of one more equal value, from which on nothing is said
+_MIX = (np.uint64(0x9E3779B97F4A7C15), np.uint64(0xBF58476D1CE4E5B9))
+# Terms that add or follow shocks, and those that move without chance: no value of them is held or drawn again.
+_MOVING = frozenset({
+    "annual", "ar", "arch", "arfima", "arima", "arma", "calendar", "constant", "damped_trend", "egarch", "exp",
+    "exponential_trend", "fractional_gaussian_noise", "garch", "geometric_brownian_motion", "gjr_garch", "holidays",
+    "integrate", "local_level", "local_linear_trend", "logistic_trend", "ma", "merton", "ornstein_uhlenbeck",
+    "random_walk", "seasonal", "seasonal_random_walk", "stochastic_cycle", "stochastic_volatility", "sum", "trend",
+    "use", "vector_arma", "vector_error_correction", "white_noise",
+})  # fmt: skip
+
+Run = list[int]  # length, minus path, minus first step: a list, as JSON has it
+
+
+@dataclass(frozen=True)
+class Repeats:
+    """How likely a value is, at most, to fall into one given cell of its rounding, whatever came before it."""
+
+    chance: float
+
+    @property
+    def length(self) -> int:
+        """Values in a stretch that no two places share by chance."""
+        return max(SHORTEST, math.ceil(math.log(_CERTAIN / _VALUES**2) / math.log(self.chance)))
+
+    @property
+    def stays(self) -> int:
+        """Equal values in a row that chance does not make."""
+        return max(SHORTEST, 1 + math.ceil(math.log(_CERTAIN / _VALUES) / math.log(self.chance)))
+
+
+def repeats_of(plan: Any, way: Any, graph: Any, lumpy: bool) -> Repeats | None:
+    """What chance may repeat of a series; None where that is not known, or where it may repeat much.
+
+    `plan`, `way`: its SeriesPlan and its way to its shocks, a Route or the reason why there is none.
+    """
+    kinds = {node.term.kind for node in graph.order([graph.series[plan.name]]) if getattr(node, "term", None)}
+    drawn = plan.drawn[plan.steps > 0]
+    parameters = graph.varied is not None and graph.varied.parameters
+    points = any(getattr(source.law, "points", None) is not None for source in _with_laws(plan.theory))
+    if not kinds <= _MOVING or lumpy or plan.may_stay or parameters or points:
+        return None
+    if not drawn.size or not np.isfinite(drawn).all() or not (drawn > 0.0).all() or not np.isfinite(plan.mean).all():
+        return None
+    far = float(np.max(np.abs(plan.mean))) + 4.0 * math.sqrt(float(drawn.max()))
+    cell = max(plan.grain, float(np.spacing(far)))
+    kalman = getattr(way, "kalman", None)
+    if kalman is not None and way.scores is not None:
+        chance = cell / (math.sqrt(2.0 * math.pi) * kalman.roots[-1])  # a normal density at its peak
+    else:  # shocks may be much smaller than values, and densities much higher than a normal one
+        chance = 1e3 * cell / math.sqrt(float(drawn.min()))
+    return Repeats(chance) if 0.0 < chance < _LIKELY and Repeats(chance).length <= LONGEST else None
+
+
+def _with_laws(theory: Any) -> Iterator[Any]:
+    return (source for source in theory.expression.sources if getattr(source, "law", None) is not None)
+
+
+@dataclass
+class Marks:
+    """Marked stretches of a series: hash, last value, path and last step of each; mergeable."""
+
+    hashes: NDArray[np.uint64]
+    values: NDArray[np.float64]
+    paths: NDArray[np.int64]
+    steps: NDArray[np.int64]
+
+    @classmethod
+    def none(cls) -> Marks:
+        return cls(np.zeros(0, np.uint64), np.zeros(0), np.zeros(0, np.int64), np.zeros(0, np.int64))
+
+    @property
+    def arrays(self) -> tuple[NDArray, NDArray, NDArray, NDArray]:
+        return self.hashes, self.values, self.paths, self.steps
+
+    def joined(self, *others: Marks) -> Marks:
+        """These and others, the smallest hashes of them."""
+        parts = zip(*(each.arrays for each in (self, *others)), strict=True)
+        all_of_them = Marks(*map(np.concatenate, parts))
+        return all_of_them.ordered(KEPT) if len(all_of_them.hashes) > KEPT else all_of_them
+
+    def ordered(self, most: int | None = None) -> Marks:
+        order = np.lexsort((self.steps, self.paths, self.values, self.hashes))[:most]
+        return Marks(*(values[order] for values in self.arrays))
+
+
+class Watch:
+    """What is carried for a range of paths of one series."""
+
+    def __init__(self, repeats: Repeats, first_path: int, paths: int):
+        self.length, self.first_path, self.step = repeats.length, first_path, 0
+        self.before = np.full((self.length - 1, paths), np.nan)
+        self.run = np.ones(paths, dtype=np.int64)
+        self.longest: Run = [1, -first_path, 0]
+        self.marks, self.waiting = Marks.none(), [Marks.none()]
+
+    def absorb(self, x: NDArray) -> None:
+        """Look at the next tile (steps, paths)."""
+        rows = np.concatenate([self.before, x])
+        self._follow(rows[self.length - 2 :])
+        self._mark(rows)
+        self.before = rows[-(self.length - 1) :].copy()
+        self.step += len(x)
+
+    def _follow(self, rows: NDArray) -> None:
+        same = rows[1:] == rows[:-1]
+        some = same.any(axis=1)
+        for row in np.flatnonzero(some):
+            if row and not some[row - 1]:
+                self.run[:] = 1
+            self.run = np.where(same[row], self.run + 1, 1)
+            path = int(np.argmax(self.run))
+            length = int(self.run[path])
+            self.longest = max(self.longest, [length, -self.first_path - path, length - 1 - self.step - int(row)])
+        if not some[-1]:
+            self.run[:] = 1
+
+    def _mark(self, rows: NDArray) -> None:
+        bits = np.ascontiguousarray(rows[self.length - 1 :]).view(np.uint64)
+        step, path = np.nonzero((bits * _MIX[0]) >> _ENDS == 0)
+        grams = rows[step[:, None] + np.arange(self.length), path[:, None]]
+        moving = np.isfinite(grams).all(axis=1) & (grams[:, 0] != grams[:, -1])  # a value that stays is told as one
+        step, path, grams = step[moving], path[moving], grams[moving]
+        total = np.zeros(len(grams), dtype=np.uint64)
+        for column in np.ascontiguousarray(grams.T).view(np.uint64):
+            total = (total ^ column ^ (column >> np.uint64(32))) * _MIX[1]
+            total ^= total >> np.uint64(29)
+        self.waiting.append(Marks(total, grams[:, -1].copy(), self.first_path + path, self.step + step))
+        if sum(len(marks.hashes) for marks in self.waiting) > KEPT:
+            self._settle()
+
+    def _settle(self) -> None:
+        self.marks, self.waiting = self.marks.joined(*self.waiting), []
+
+    def finish(self) -> tuple[Run, Marks]:
+        """The longest run of equal values, and the marks."""
+        self._settle()
+        return self.longest, self.marks
+
+
+def checks(
+    series: str, repeats: Repeats, run: Run, marks: Marks, paths: NDArray, prints: NDArray
+) -> Iterator[Check]:
+    """Whether some values of a series stay, or are there twice.
+
+    `paths`, `prints`: the fingerprints of whole paths; those that are equal from end to end are told elsewhere.
+    """
+    length, path, step = run[0], -run[1], -run[2]
+    fault = ""
+    if length >= repeats.stays:
+        fault = f"{length:,} equal values in a row at path {path}, steps {step}–{step + length - 1}, as if stuck"
+    yield Check.fact(series, STUCK, "all steps", fault, "no value stays where chance moves it")
+    fault = _copied(marks.ordered(), repeats.length, paths, prints)
+    yield Check.fact(series, COPIED, "all pairs", fault, "no stretch of steps was found twice")
+
+
+def _copied(marks: Marks, length: int, paths: NDArray, prints: NDArray) -> str:
+    """The stretch that is there twice with the most marks, in words; nothing where there is none."""
+    same = (marks.hashes[1:] == marks.hashes[:-1]) & (marks.values[1:] == marks.values[:-1])
+    order = np.argsort(paths, kind="stable")
+    whole = prints[order[np.searchsorted(paths, marks.paths, sorter=order)]]
+    found: dict[tuple[int, int, int], list[int]] = {}
+    for k in np.flatnonzero(same).tolist():
+        one, other, step, later = (int(x) for x in (*marks.paths[k : k + 2], *marks.steps[k : k + 2]))
+        if one == other or whole[k] != whole[k + 1]:
+            found.setdefault((one, other, later - step), []).append(step)
+    if not found:
+        return ""
+    (one, other, shift), steps = min(found.items(), key=lambda item: (-len(item[1]), item[0]))
+    first, last = min(steps) - length + 1, max(steps)
+    again = f"at steps {first + shift}–{last + shift}"
+    if one != other:
+        again = f"in path {other}, steps {first + shift}–{last + shift}"
+    more = "" if len(found) == 1 else f"; {len(found):,} such pairs of stretches were found"
+    return f"steps {first}–{last} at least of path {one} are there again bit for bit {again}{more}"
