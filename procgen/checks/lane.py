@@ -42,6 +42,7 @@ class Lane:
         self.relations = [RelationLane(relation, paths) for relation in plan.relations]
         self.prints = np.zeros((len(plan.series), paths), dtype=np.uint64)
         self.watches = self.sums.structure.watches(first_path, paths)
+        self.held: dict[int, NDArray] = {}  # column -> the last row of what must not move at every step
         self.carriers = {name: way.start(first_path, paths) for name, way in self.sums.routes.items()}
         self.shocks = {name: sums.lane(paths, first_path) for name, sums in self.sums.shocks.items()}
         self.errors = {name: sums.lane(paths) for name, sums in self.sums.errors.items()}
@@ -80,6 +81,9 @@ class Lane:
             x = np.where(np.isfinite(x), x, np.nan)  # named there; from here on the path is left out
         if column in self.watches:
             self.watches[column].absorb(x)
+        if self.plan.precision[column].possible.every > 1:
+            sums.structure.hold(column, x, self.held.get(column), self.first_path, self.step)
+            self.held[column] = x[-1:].copy()
         for i in np.flatnonzero((plan.steps >= self.step) & (plan.steps < self.step + len(x))):
             self.probes[:, self.plan.offset[column] + i] = x[plan.steps[i] - self.step]
         if plan.name in self.plan.gaps:

@@ -9,7 +9,7 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
-from procgen.checks import copies, extremes
+from procgen.checks import copies, extremes, support
 from procgen.checks.verdict import Check
 
 _SAMPLE = 61  # every so manieth step's bits are looked at for a detour through float32; at least 32 steps
@@ -29,6 +29,7 @@ class Precision:
     reach: extremes.Reach | None = None  # how far values may lie from their mean
     gaps: bool = False  # whether values may be missing
     repeats: copies.Repeats | None = None  # what chance may repeat of it, where that is known to be little
+    possible: support.Possible = field(default_factory=support.Possible)  # what its values may be
 
 
 @dataclass
@@ -41,6 +42,8 @@ class Structure:
     off_grid: dict[str, list[int]] = field(default_factory=dict)
     narrow: dict[str, list[int]] = field(default_factory=dict)  # series -> [values that fit float32, whole ones, all]
     far: dict[str, list[extremes.Far]] = field(default_factory=dict)  # series -> its values farthest from their mean
+    outside: dict[str, support.Found] = field(default_factory=dict)  # series -> values that it cannot give
+    moved: dict[str, support.Found] = field(default_factory=dict)  # series -> values that should have been held
     runs: dict[str, copies.Run] = field(default_factory=dict)  # series -> its longest run of one value
     marks: dict[str, copies.Marks] = field(default_factory=dict)  # series -> stretches that would show in a copy
     prints: list[tuple[int, NDArray[np.uint64]]] = field(default_factory=list)  # (first path, (paths, series))
@@ -71,7 +74,16 @@ class Structure:
                 seen[k] += count
         if what.reach is not None:
             self.far[what.name] = what.reach.farthest(x, first_path, first_step, self.far.get(what.name, ()))
+        outside = what.possible.outside(x)
+        if outside is not None:
+            support.note(self.outside, what.name, outside, x, first_path, first_step)
         return finite
+
+    def hold(self, column: int, x: NDArray, before: NDArray | None, first_path: int, first_step: int) -> None:
+        """Look whether a tile (steps, paths) is held as stated; `before` is the row (1, paths) before it."""
+        moved = self.series[column].possible.moved(x, before, first_step)
+        if moved is not None:
+            support.note(self.moved, self.series[column].name, moved, x, first_path, first_step)
 
     def watches(self, first_path: int, paths: int) -> dict[int, copies.Watch]:
         """Of each column whose values chance does not repeat, what is carried for a range of paths."""
@@ -112,6 +124,8 @@ class Structure:
             self.narrow[name] = [a + b for a, b in zip(self.narrow.get(name, [0, 0, 0]), counts, strict=True)]
         for name, values in other.far.items():
             self.far[name] = extremes.merged([*self.far.get(name, ()), *values])
+        support.merge(self.outside, other.outside)
+        support.merge(self.moved, other.moved)
         for name, run in other.runs.items():
             self.runs[name] = max(self.runs.get(name, run), run)
             self.marks[name] = self.marks.get(name, copies.Marks.none()).joined(other.marks[name])
@@ -122,6 +136,7 @@ class Structure:
         for what in self.series:
             yield self._finite(what)
             yield self._precision(what)
+            yield from support.checks(what.name, what.possible, self.outside.get(what.name), self.moved.get(what.name))
             if what.reach is not None:
                 n = self.steps * sum(len(rows) for _, rows in self.prints)
                 yield from extremes.checks(what.name, what.reach, self.far.get(what.name, ()), n)

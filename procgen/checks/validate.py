@@ -26,6 +26,7 @@ from procgen.checks.relations import plan_relations
 from procgen.checks.special import lumpy
 from procgen.checks.squares import plan_squares
 from procgen.checks.structure import Precision
+from procgen.checks.support import Possible, possible_of
 from procgen.checks.tied import tied_checks
 from procgen.checks.verdict import Check, Verdict
 from procgen.ensemble.plan import Block
@@ -137,7 +138,10 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
         routes[name] = way
         random = th[name].random
         reach = Reach(th[name], grain) if random else None
-        precision.append(Precision(name, declared.type, declared.decimals, random, lumpy(th[name]), reach))
+        possible = possible_of(graph, name, declared) if random else Possible()
+        precision.append(
+            Precision(name, declared.type, declared.decimals, random, lumpy(th[name]), reach, possible=possible)
+        )
         precision[-1].repeats = repeats_of(plan, way, graph, lumpy(th[name])) if random else None
     ways = [way for way in routes.values() if isinstance(way, Route) and way.scores is not None]
     pairs = {(a.series, b.series): expected(a, b, th.axis.space) for a, b in list(combinations(ways, 2))[:PAIR_LIMIT]}

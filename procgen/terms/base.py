@@ -20,6 +20,7 @@ import numpy as np
 
 from procgen.chance.laws import Normal
 from procgen.spec.declare import LawOf, Parameter, Real
+from procgen.terms.support import EVERYTHING, Support
 
 Array = np.ndarray
 State = dict[str, Array]
@@ -197,6 +198,14 @@ class Term:
     def ahead(self, steps: Array, state: State, *inputs: Ahead) -> Ahead | Unknown:
         """Mean and variance at the coming `steps`, given the state just before the first of them."""
         return Unknown(f"{self.kind} has no closed forecast")
+
+    def support(self, *inputs: Support) -> Support:
+        """The values that it can have, from those that its inputs can have; never fewer."""
+        return EVERYTHING
+
+    def support_of(self, output: str) -> Support:
+        """The values that a hidden output can have."""
+        return EVERYTHING
 
     def moments(self, axis: Any, *inputs: Any) -> Any:
         """The term's exact theory as an expression on the axis."""

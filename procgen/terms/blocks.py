@@ -7,6 +7,7 @@ import numpy as np
 from procgen.spec.declare import Choice, Parameter, Whole
 from procgen.terms.base import Ahead, Array, Term, Unknown
 from procgen.terms.combine import OF
+from procgen.terms.support import Support
 
 MOST = 10_000
 OVER = Parameter("over", "k", Whole(at_least=2, at_most=MOST), "how many of its body's steps make one of the series")
@@ -63,6 +64,14 @@ class Aggregate(Finer):
         still = np.zeros_like(body.mean) if self.by != "last" else body.variance
         return Ahead(self.of_blocks(self._blocks(body.mean)), self._blocks(still + 0.0 * body.mean)[:, -1])
 
+    def support(self, body):
+        if self.by == "last":
+            return body
+        if self.by == "mean":
+            return Support(body.low, body.high)
+        whole = body.lattice()
+        return Support(self.over * whole.low, self.over * whole.high, whole.step, self.over * whole.offset)
+
     def moments(self, axis, body):
         k = self.over
         if self.by == "last":
@@ -98,6 +107,9 @@ class Subsample(Finer):
 
     def ahead(self, steps, state, body):
         return Ahead(*(self._blocks(rows + 0.0 * body.mean)[:, 0] for rows in (body.mean, body.variance)))
+
+    def support(self, body):
+        return body
 
     def moments(self, axis, body):
         return axis.every(body, self.over, 0)

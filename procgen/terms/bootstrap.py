@@ -8,6 +8,7 @@ from procgen.chance.laws import LAWS
 from procgen.spec.columns import Column
 from procgen.spec.declare import Flag, Parameter, Span
 from procgen.terms.base import Ahead, Draw, Term, number
+from procgen.terms.support import EVERYTHING, finite
 from procgen.terms.window import whole
 
 UNIFORM = LAWS["uniform"]()
@@ -116,6 +117,12 @@ class MovingBlocks(Term):
         going_on = np.logical_and.accumulate(place > 0)[:, None]
         sure = self._out(state["start"], place)[""]
         return Ahead(np.where(going_on, sure, mean), np.where(going_on, 0.0, variance))
+
+    def support(self, *inputs):
+        return finite(self.numbers.tolist())
+
+    def support_of(self, output):
+        return finite(range(self.starts)) if output == "block_start" else EVERYTHING
 
     def moments(self, axis, *inputs):
         return axis.blocks(self.address, UNIFORM, self.numbers, self.size, bool(self.circular))

@@ -7,6 +7,7 @@ import numpy as np
 from procgen.chance.portable import exp, log
 from procgen.spec.declare import Body, Parameter, Text
 from procgen.terms.base import Ahead, Term, Unknown, number
+from procgen.terms.support import POSITIVE, added, finite
 
 OF = Parameter("of", "", Body(), "what it is applied to; a list is a sum")
 
@@ -40,6 +41,9 @@ class Sum(Term):
     def ahead(self, steps, state, *inputs):
         return Ahead(_added([x.mean for x in inputs]), _added([x.variance for x in inputs]))
 
+    def support(self, *inputs):
+        return added(inputs)
+
     def moments(self, axis, *inputs):
         total = inputs[0]
         for part in inputs[1:]:
@@ -72,6 +76,9 @@ class Scaled(Term):
 
     def ahead(self, steps, state, body):
         return Ahead(self.factor * body.mean, self.factor * self.factor * body.variance)
+
+    def support(self, body):
+        return body * finite([self.factor])
 
     def moments(self, axis, body):
         return body * self.factor
@@ -108,6 +115,12 @@ class Product(Term):
                 values = values / part
         return values, {}
 
+    def support(self, *inputs):
+        first, *others = inputs
+        for part in others:
+            first = first * part
+        return first
+
     def moments(self, axis, *inputs):
         return axis.product(inputs)
 
@@ -138,6 +151,11 @@ class Exp(Term):
         if np.any(values <= 0.0):
             return Unknown("some values are not above 0, which an exponential always is")
         return log(values), {}
+
+    def support(self, body):
+        if body.values is not None:
+            return finite(float(exp(np.float64(x))) for x in body.values)
+        return POSITIVE
 
     def moments(self, axis, body):
         return body.exp()

@@ -11,6 +11,7 @@ from procgen.chance.portable import exp
 from procgen.chance.tables import NegativeBinomial, Poisson, uniforms
 from procgen.spec.declare import Body, Parameter, Real
 from procgen.terms.base import Ahead, Draw, Term, Unknown, number
+from procgen.terms.support import COUNTS
 
 UNIFORM = LAWS["uniform"]()
 MEAN = Parameter(
@@ -79,6 +80,9 @@ class Counts(Term):
             return Unknown(f"{self.kind} follows the law of its body's forecast, not its mean and variance alone")
         mean = self.mean * np.exp(inputs[0].mean) if len(inputs) > 1 else np.full((len(steps), 1), float(self.mean))
         return Ahead(mean, np.polynomial.polynomial.polyval(mean, self.central()[0]))
+
+    def support(self, *inputs):
+        return COUNTS
 
     def moments(self, axis, *inputs):
         intensity = inputs[0].exp() * self.mean if inputs else axis.level(self.mean)

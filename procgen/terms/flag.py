@@ -8,6 +8,7 @@ from procgen.chance.kernel import kernel
 from procgen.chance.laws import LAWS
 from procgen.spec.declare import Moment, Parameter, Real, Records, Span
 from procgen.terms.base import Ahead, Draw, Term, number
+from procgen.terms.support import BINARY
 
 UNIFORM = LAWS["uniform"]()
 ROOT_12 = 3.4641016151377544
@@ -145,6 +146,9 @@ class Flag(Term):
             means.append(self.share + rest * (state.get("on", rest) - self.share))
         mean = np.concatenate(means)
         return Ahead(mean, mean * (1.0 - mean))
+
+    def support(self, *inputs):
+        return BINARY
 
     def moments(self, axis, *inputs):
         if self.spans:

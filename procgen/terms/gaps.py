@@ -8,6 +8,7 @@ from procgen.spec.declare import Parameter, Real, Span
 from procgen.terms.base import Ahead, Draw, Term, number
 from procgen.terms.combine import OF
 from procgen.terms.flag import UNIFORM, Flag
+from procgen.terms.support import BINARY, EVERYTHING
 
 
 class Missing(Term):
@@ -78,6 +79,12 @@ class Missing(Term):
 
     def events(self, values, cell, known, state, at):
         return self.chain.events(np.where(np.isnan(values), 1.0, 0.0), cell, known, state, at)
+
+    def support(self, body, *inputs):
+        return body
+
+    def support_of(self, output):
+        return BINARY if output == "missing" else EVERYTHING
 
     def moments(self, axis, body):
         enter, stay = self.chain.chances

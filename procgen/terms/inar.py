@@ -12,6 +12,7 @@ from procgen.chance.portable import exp, log1p
 from procgen.chance.tables import GRID, NegativeBinomial, Poisson, Table, thinning, uniforms
 from procgen.spec.declare import Parameter, Real
 from procgen.terms.base import Ahead, Draw, Term, number
+from procgen.terms.support import COUNTS
 
 UNIFORM = LAWS["uniform"]()
 MOST = 2000  # counts for which survivors are tabled
@@ -147,6 +148,9 @@ class Inar(Term):
         x = state["x"]
         new = spread * (1.0 - power * power) - self.mean * power * (1.0 - power)
         return Ahead(self.mean + power * (x - self.mean), new + power * (1.0 - power) * x)
+
+    def support(self, *inputs):
+        return COUNTS
 
     def moments(self, axis, *inputs):
         alpha, mean, law = self.alpha, self.mean, self.law

@@ -12,6 +12,7 @@ from procgen.chance.tables import NegativeBinomial, Poisson, uniforms
 from procgen.spec.declare import Body, Choice, Parameter, Real, Span
 from procgen.terms.base import Ahead, Draw, Term, Unknown, number
 from procgen.terms.flag import Flag, runs
+from procgen.terms.support import BINARY, COUNTS, EVERYTHING, Support, finite
 
 UNIFORM = LAWS["uniform"]()
 LOST = 1e-6  # chance of a size that rounds to nothing, below which that does not matter
@@ -174,6 +175,12 @@ class Intermittent(Term):
         square = size.mean * size.mean + size.sd * size.sd
         return Ahead(comes.mean * size.mean, comes.mean * square - (comes.mean * size.mean) ** 2)
 
+    def support(self, *inputs):
+        return COUNTS if self.law == "counts" else Support(low=0.0)
+
+    def support_of(self, output):
+        return BINARY if output == "occurs" else EVERYTHING
+
     def moments(self, axis, *inputs):
         occurs = self.flag_moments(axis)
         size = self.law_of_size.expression(axis, f"{self.address}.size")
@@ -228,6 +235,12 @@ class ZeroInflated(Term):
         share = 1.0 - self.share
         mean = share * body.mean
         return Ahead(mean, share * (body.variance + body.mean * body.mean) - mean * mean)
+
+    def support(self, body, *inputs):
+        return body | finite([0.0])
+
+    def support_of(self, output):
+        return BINARY if output == "passes" else EVERYTHING
 
     def moments(self, axis, body):
         passes = axis.chain(self.address, UNIFORM, 1.0 - self.share, 0.0)

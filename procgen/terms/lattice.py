@@ -8,6 +8,7 @@ from procgen.spec.declare import Parameter, Real
 from procgen.terms.base import number
 from procgen.terms.combine import OF
 from procgen.terms.shape import Elementwise
+from procgen.terms.support import Support
 
 TO = Parameter("to", "Δ", Real(above=0), "what the values are multiples of", default=1.0, unit="series")
 
@@ -23,6 +24,10 @@ class Round(Elementwise):
 
     def of_value(self, x):
         return np.rint(x / self.to) * self.to
+
+    def support(self, body):
+        ends = body.mapped(lambda x: float(self.of_value(np.float64(x))))
+        return ends if ends.values is not None else Support(ends.low, ends.high, self.to)
 
     def moments(self, axis, body):
         return axis.rounded(body, self.of_value, self.to, self.shift)

@@ -8,6 +8,7 @@ import numpy as np
 
 from procgen.spec.declare import Moment, Parameter, Real, Records
 from procgen.terms.base import Ahead, Array, Term, number, signed
+from procgen.terms.support import finite
 
 
 class Known(Term):
@@ -46,6 +47,9 @@ class Constant(Known):
 
     def equation(self, *inputs):
         return f"x[t] = {number(self.level)}"
+
+    def support(self, *inputs):
+        return finite([self.level])
 
     def moments(self, axis, *inputs):
         return axis.known(self.at, constant=True)

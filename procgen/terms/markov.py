@@ -26,6 +26,7 @@ from procgen.spec.named import Named, Names, Rows
 from procgen.spec.tree import Tree
 from procgen.terms.base import Ahead, Array, Draw, Issue, State, Term, number
 from procgen.terms.followed import Seen
+from procgen.terms.support import finite
 
 UNIFORM = LAWS["uniform"]()
 ROOT_12 = 3.4641016151377544
@@ -373,6 +374,9 @@ class Chain(Seen, Term):
         powers = [[float(i) for i in range(len(chances))], [float(i * i) for i in range(len(chances))]]
         mean, square = (added([weight * c for weight, c in zip(weights, chances, strict=True)]) for weights in powers)
         return Ahead(mean, np.maximum(square - mean * mean, 0.0))
+
+    def support(self, *inputs):
+        return finite(range(len(self.chain.names)))
 
     def moments(self, axis, *inputs):
         return axis.states(self.address, UNIFORM, *self.chain.theory)

@@ -44,6 +44,9 @@ class Lag(Term):
         variance = np.concatenate(_same_width(np.zeros((len(known), 1)), body.variance[:left] + np.zeros((1, width))))
         return Ahead(mean, variance)
 
+    def support(self, body):
+        return body
+
     def moments(self, axis, body):
         return body.lag(self.by)
 

@@ -12,6 +12,7 @@ from procgen.chance.portable import exp, log
 from procgen.chance.tables import Poisson, uniforms
 from procgen.spec.declare import Parameter, Real
 from procgen.terms.base import Ahead, Draw, Term, Unknown, number, signed
+from procgen.terms.support import POSITIVE
 from procgen.terms.walk import RandomWalk, accumulate
 
 UNIFORM, NORMAL = LAWS["uniform"](), Normal()
@@ -65,6 +66,9 @@ class Brownian(Term):
         logs = self.walk.ahead(steps, state, shock)
         mean = self.start * np.exp(logs.mean + logs.variance / 2.0)
         return Ahead(mean, mean * mean * np.expm1(logs.variance))
+
+    def support(self, *inputs):
+        return POSITIVE
 
     def moments(self, axis, *inputs):
         noise = axis.source(self.address, NORMAL, self.sd)
@@ -173,6 +177,9 @@ class Merton(Term):
         once = float(exp(self.jump_mean + self.jump_sd * self.jump_sd / 2.0)) - 1.0
         twice = float(exp(2.0 * self.jump_mean + 2.0 * self.jump_sd * self.jump_sd)) - 1.0
         return self.sd * self.sd + self.rate * (twice - 2.0 * once)
+
+    def support(self, *inputs):
+        return POSITIVE
 
     def moments(self, axis, *inputs):
         def mean(steps):

@@ -8,6 +8,7 @@ from procgen.spec.columns import Column
 from procgen.spec.declare import Choice, Parameter
 from procgen.terms.base import number
 from procgen.terms.level import Known
+from procgen.terms.support import finite
 
 
 class Given(Known):
@@ -52,6 +53,9 @@ class Given(Known):
         if self.after == "repeat":
             place = np.where(steps >= 0, steps % ahead, steps) - self.first
         return self.numbers[np.clip(place, 0, len(self.numbers) - 1)]
+
+    def support(self, *inputs):
+        return finite(self.numbers.tolist())
 
     def equation(self, *inputs):
         ahead = len(self.numbers) + self.first

@@ -13,6 +13,7 @@ from procgen.terms.base import Ahead, Draw, Term, Unknown
 from procgen.terms.combine import Hidden
 from procgen.terms.flag import Flag
 from procgen.terms.followed import Shown
+from procgen.terms.support import EVERYTHING, either, finite
 
 
 class Regimes(Term):
@@ -112,6 +113,12 @@ class Regimes(Term):
         mean = markov.added([c * x.mean for c, x in zip(chances, inputs, strict=False)])
         spread = [c * (x.variance + (x.mean - mean) ** 2) for c, x in zip(chances, inputs, strict=False)]
         return Ahead(mean, markov.added(spread))
+
+    def support(self, *inputs):
+        return either(inputs[: len(self.branches)])
+
+    def support_of(self, output):
+        return finite(range(len(self.branches))) if output == "regime" else EVERYTHING
 
     def moments(self, axis, *inputs):
         branches, state = inputs[: len(self.branches)], inputs[-1]

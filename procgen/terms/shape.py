@@ -8,6 +8,7 @@ from procgen.chance.portable import exp, log
 from procgen.spec.declare import Body, Parameter, Real, Whole
 from procgen.terms.base import Ahead, Array, Term, Unknown, number
 from procgen.terms.combine import OF
+from procgen.terms.support import INF, Support, either, finite
 
 LARGEST = 700.0  # where exp overflows; a sigmoid is flat long before
 
@@ -57,6 +58,10 @@ class Hinge(Elementwise):
     def of_value(self, x):
         return np.maximum(x - self.above if self.below is None else self.below - x, 0.0)
 
+    def support(self, body):
+        away = body + finite([-self.above]) if self.below is None else body * finite([-1.0]) + finite([self.below])
+        return away.within(0.0, INF)
+
     def moments(self, axis, body):
         if self.below is None:
             return axis.hinge(body + axis.level(-self.above))
@@ -92,6 +97,9 @@ class Clip(Elementwise):
             x = np.maximum(x, self.low)
         return x if self.high is None else np.minimum(x, self.high)
 
+    def support(self, body):
+        return body.within(-INF if self.low is None else self.low, INF if self.high is None else self.high)
+
     def moments(self, axis, body):
         # min(max(x, l), h) = l + (x − l)₊ − (x − h)₊, and x − (x − h)₊ where there is no l
         held = body
@@ -115,6 +123,11 @@ class Abs(Elementwise):
     def of_value(self, x):
         return np.abs(x)
 
+    def support(self, body):
+        if body.values is not None:
+            return finite(abs(x) for x in body.values)
+        return either([body, body * finite([-1.0])]).within(0.0, INF)
+
     def moments(self, axis, body):
         return axis.hinge(body) * 2.0 + body * -1.0
 
@@ -135,6 +148,11 @@ class Power(Elementwise):
         for _ in range(self.exponent - 1):
             y = y * x
         return y
+
+    def support(self, body):
+        if self.exponent % 2 and not body.everything:
+            return body.mapped(self.of_value)
+        return Support(low=0.0) if self.exponent % 2 == 0 else body
 
     def moments(self, axis, body):
         return axis.product([body] * self.exponent)
@@ -167,6 +185,9 @@ class Sigmoid(Elementwise):
         if np.any((values <= self.low) | (values >= self.high)):
             return Unknown(f"some values are not between {number(self.low)} and {number(self.high)}")
         return _log_odds(values, self.low, self.high), {}
+
+    def support(self, body):
+        return Support(float(self.low), float(self.high))
 
     def moments(self, axis, body):
         return axis.curved(body, self.of_value)
@@ -222,6 +243,11 @@ class Larger(Term):
 
     def recurse(self, inputs, state, at):
         return self._chosen(*inputs), state
+
+    def support(self, first, second):
+        both = first | second
+        low = max(first.low, second.low) if self.sign > 0 else both.low
+        return both.within(low, INF if self.sign > 0 else min(first.high, second.high))
 
     def moments(self, axis, first, second):
         # max(x, y) = y + (x − y)₊ and min(x, y) = y − (y − x)₊

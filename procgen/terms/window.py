@@ -7,6 +7,7 @@ import numpy as np
 from procgen.spec.declare import Moment, Parameter, Span
 from procgen.terms.base import Array, Term, number, steps_since
 from procgen.terms.combine import OF
+from procgen.terms.support import Support
 
 LONGEST = 100_000
 
@@ -57,6 +58,9 @@ class Hold(Term):
         values = inside if rows[0] >= 0 else np.where((rows < 0)[:, None], state["x"], inside)
         return values, {"x": values[-1:].copy()}
 
+    def support(self, body):
+        return body
+
     def moments(self, axis, body):
         return axis.held(body, self.read_at, int(self.every))
 
@@ -104,6 +108,9 @@ class RollingMean(Term):
         width = max(state["x"].shape[1], inputs[0].shape[1])
         rows = np.concatenate([np.broadcast_to(x, (len(x), width)) for x in (state["x"], inputs[0])])
         return self._means(rows), {"x": rows[len(inputs[0]) :].copy()}
+
+    def support(self, body):
+        return Support(body.low, body.high)
 
     def moments(self, axis, body):
         k = int(self.over)

@@ -1,0 +1,214 @@
+"""Values that a process cannot give: beyond its bounds, off its lattice, or none of the few that it has.
+
+What a series can give follows from its terms (`Term.support`); where that is everything, or moves with the step, there
+is nothing to check. A body that is held must not move between its readings, whatever its values are.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterator
+from dataclasses import dataclass, replace
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from procgen.checks.verdict import Check
+from procgen.checks.words import number
+from procgen.terms.combine import Exp, Hidden, Product, Scaled, Sum
+from procgen.terms.gaps import Missing
+from procgen.terms.level import Constant
+from procgen.terms.shape import Elementwise
+from procgen.terms.support import EVERYTHING, INF, Support, finite, near
+from procgen.terms.window import Hold
+
+POSSIBLE, HELD = "possible values", "held values"
+_NEAR = {"float32": 2.0**-23}  # of a value's size: what is as near to a possible value is that value
+_DOUBLE = 1e-9
+
+Found = list[Any]  # how many, then path, step and value of the first, and of what is held the value before: for JSON
+
+
+@dataclass(frozen=True)
+class Possible:
+    """What the values of a series may be, as stored; `every`, `first`: how they are held, if they are."""
+
+    support: Support = EVERYTHING
+    near: float = _DOUBLE
+    every: int = 1
+    first: int = 0
+
+    def outside(self, x: NDArray) -> NDArray | None:
+        """Which values cannot be; None when all can. What is not finite is left to other checks."""
+        s, near = self.support, self.near
+        if s.everything:
+            return None
+        with np.errstate(invalid="ignore", over="ignore"):
+            if s.values is not None:
+                wrong = _off(x, np.array(s.values), near)
+            else:
+                slack_low, slack_high = (near * abs(end) if math.isfinite(end) else 0.0 for end in (s.low, s.high))
+                wrong = (x < s.low - slack_low) | (x > s.high + slack_high)
+                if s.above:
+                    wrong |= x <= s.low
+                if s.step:
+                    ratio = (x - s.offset) / s.step
+                    wrong |= np.abs(ratio - np.rint(ratio)) > near * (1.0 + np.abs(ratio) + abs(s.offset / s.step))
+        wrong &= np.isfinite(x)
+        return wrong if wrong.any() else None
+
+    def moved(self, x: NDArray, before: NDArray | None, first_step: int) -> NDArray | None:
+        """Which values differ from the one before though it is held; None when none does."""
+        rows = np.arange(first_step, first_step + len(x))
+        inside = (rows - self.first) % self.every != 0
+        earlier = np.concatenate([x[:1] if before is None else before, x[:-1]])
+        with np.errstate(invalid="ignore"):
+            wrong = np.abs(x - earlier) > self.near * np.maximum(np.abs(x), np.abs(earlier))
+        wrong &= inside[:, None]
+        return wrong if wrong.any() else None
+
+
+def _off(x: NDArray, values: NDArray, near: float) -> NDArray:
+    after = np.minimum(np.searchsorted(values, x), len(values) - 1)
+    gap = np.minimum(np.abs(x - values[after]), np.abs(x - values[np.maximum(after - 1, 0)]))
+    return gap > near * max(float(np.max(np.abs(values))), 1e-300)
+
+
+def note(book: dict[str, Found], name: str, wrong: NDArray, x: NDArray, first_path: int, first_step: int) -> None:
+    """Add the wrong values of a tile (steps, paths) to what is known of a series."""
+    path, step = (int(k) for k in np.argwhere(wrong.T)[0])
+    found = [int(np.count_nonzero(wrong)), first_path + path, first_step + step, float(x[step, path])]
+    merge(book, {name: found})
+
+
+def merge(book: dict[str, Found], other: dict[str, Found]) -> None:
+    """Add what was found elsewhere; the first is that of the lowest path, and of its earliest step."""
+    for name, found in other.items():
+        old = book.get(name, [0, *found[1:]])
+        book[name] = [old[0] + found[0], *min(old[1:], found[1:])]
+
+
+def checks(series: str, possible: Possible, outside: Found | None, moved: Found | None) -> Iterator[Check]:
+    """Whether every value of a series is one that it can have, and is held as long as stated."""
+    if not possible.support.everything:
+        allowed, fault = words(possible.support), ""
+        if outside is not None:
+            count, path, step, value = outside
+            fault = (
+                f"{count:,} value{'s' if count > 1 else ''} that the process cannot give, the first at path {path}, "
+                f"step {step}: {number(value, 10)}, where values are {allowed}"
+            )
+        yield Check.fact(series, POSSIBLE, "all steps", fault, f"every value is {allowed}")
+    if possible.every > 1:
+        allowed, fault = f"held for {possible.every} steps from step {possible.first % possible.every} on", ""
+        if moved is not None:
+            count, path, step, value = moved
+            fault = (
+                f"{count:,} value{'s differ' if count > 1 else ' differs'} from the one before, the first at path "
+                f"{path}, step {step}: {number(value, 10)}, where values are {allowed}"
+            )
+        yield Check.fact(series, HELD, "all steps", fault, f"every value is {allowed}")
+
+
+def words(support: Support) -> str:
+    """A support in plain words, such as `whole numbers from 0`."""
+    low, high, step = number(support.low, 6), number(support.high, 6), support.step
+    if support.values is not None:
+        shown = [number(x, 6) for x in support.values]
+        if len(shown) > 6:
+            return f"among {len(shown):,} numbers between {low} and {high}"
+        return " or ".join(filter(None, [", ".join(shown[:-1]), shown[-1]]))
+    ends = f"above {low}" if support.above else "" if support.low == -INF else f"from {low}"
+    if support.high < INF:
+        ends = f"between {low} and {high}" if support.low > -INF else f"up to {high}"
+    if not step:
+        return f"{low} or more" if ends.startswith("from") else ends
+    many = "whole numbers" if step == 1.0 else f"multiples of {number(step, 6)}"
+    if not near(support.offset, step):
+        many = f"{number(support.offset, 6)} and multiples of {number(step, 6)} away from it"
+    return f"{many} {ends}".strip()
+
+
+# what the graph says
+
+
+def possible_of(graph: Any, name: str, declared: Any) -> Possible:
+    """What a series of a graph can give, as its declaration stores it."""
+    closeness = _NEAR.get(declared.type, _DOUBLE)
+    support = stored(_common(graph, name), declared)
+    every, first = held(graph.series[name]) or (1, 0)
+    if graph.varied is not None and graph.varied.parameters:
+        every, first = 1, 0
+    return Possible(support, closeness, every, first)
+
+
+def _common(graph: Any, name: str) -> Support:
+    """The support of a series, if parameters that are drawn by path leave it as it is."""
+    from procgen.spec.model import SpecError
+    from procgen.terms.graph import Graph
+
+    support = support_of(graph.series[name])
+    if graph.varied is None or not graph.varied.parameters or support.everything:
+        return support
+    for rank in (0.1, 0.9):
+        try:
+            values = {key: _at(one.varying.law, rank) for key, one in graph.varied.parameters.items()}
+            other = Graph(graph.varied.at(values))
+        except SpecError:
+            return EVERYTHING
+        if support_of(other.series[name]) != support:
+            return EVERYTHING
+    return support
+
+
+def _at(law: Any, rank: float) -> float:
+    from procgen.chance import draws
+    from procgen.spec.draws import TableDraw
+
+    if isinstance(law, TableDraw):
+        return sorted(law.numbers)[int(rank * len(law.numbers))]
+    return float(draws.values(law, np.array([rank]))[0])
+
+
+def support_of(node: Any, known: dict[int, Support] | None = None) -> Support:
+    """The values that a node can give."""
+    known = {} if known is None else known
+    if id(node) not in known:
+        if not hasattr(node, "term"):
+            known[id(node)] = EVERYTHING  # a primary stream
+        elif isinstance(node.term, Hidden):
+            known[id(node)] = node.inputs[0].term.support_of(node.term.output)
+        else:
+            known[id(node)] = node.term.support(*(support_of(part, known) for part in node.inputs))
+    return known[id(node)]
+
+
+def stored(support: Support, declared: Any) -> Support:
+    """What is left of a support by rounding to the declared decimals."""
+    decimals = 0 if declared.type == "int64" else declared.decimals
+    if decimals is None or support.everything:
+        return support
+    scale = 10.0**decimals
+
+    def rounded(x: float) -> float:
+        return float(np.rint(x * scale) / scale) if math.isfinite(x) else x
+
+    if support.values is not None:
+        return finite(rounded(x) for x in support.values)
+    fits = support.step and near(support.step, 1.0 / scale) and near(support.offset, 1.0 / scale)
+    kept = replace(support, low=rounded(support.low), high=rounded(support.high))
+    return kept if fits else replace(kept, step=0.0, offset=0.0, above=False)
+
+
+def held(node: Any) -> tuple[int, int] | None:
+    """Length and a first step of the blocks in which a node does not move; None when it may move at every step."""
+    term = getattr(node, "term", None)
+    if isinstance(term, Hold):
+        return int(term.every), int(term.first)
+    if isinstance(term, Missing | Exp | Scaled | Elementwise):
+        return held(node.inputs[0])
+    if isinstance(term, Sum | Product):
+        found = {held(part) for part in node.inputs if not isinstance(getattr(part, "term", None), Constant)}
+        return found.pop() if len(found) == 1 else None
+    return None
