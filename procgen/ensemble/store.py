@@ -180,7 +180,9 @@ class Folder:
         try:
             descriptor = self._lock(time.monotonic() + patience)
         except (NotADirectoryError, FileExistsError) as error:
-            raise EnsembleError(f"{error.filename} is not a folder; choose another OUT") from None
+            above = (*reversed(self.path.parents), self.path)
+            wrong = next((place for place in above if place.exists() and not place.is_dir()), error.filename)
+            raise EnsembleError(f"{wrong} is not a folder; choose another OUT") from None
         except OSError as error:
             raise EnsembleError(system_sentence(error, f"making {self.path}")) from None
         failed, others = True, (self.path / PLAN).exists()

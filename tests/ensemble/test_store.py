@@ -192,6 +192,10 @@ def test_out_that_is_a_file_is_refused(tmp_path):
     (tmp_path / "out").write_text("mine")
     with pytest.raises(EnsembleError, match="out is not a folder; choose another OUT"):
         fake_render(fake_spec(paths=20, steps=5), tmp_path / "out")
+    for out in ("out", "out/below"):
+        with pytest.raises(EnsembleError, match="out is not a folder; choose another OUT"):
+            fake_render(fake_spec(paths=20, steps=5), tmp_path / out, overwrite=True)
+    assert (tmp_path / "out").read_text() == "mine"
 
 
 def test_a_missing_part_is_named_and_drawn_again(tmp_path, monkeypatch):
