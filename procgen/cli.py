@@ -144,7 +144,7 @@ def render(
     import procgen as pg
     from procgen.report.rendered import rendered
 
-    specs = asked(spec, variant, setting, start)
+    specs = asked(spec, variant, setting, start, {"paths": paths, "steps": steps, "seed": seed})
     wanted = None if expect is None else expected(expect, specs)
     for name, loaded in specs.items():
         folder = within(out, name)

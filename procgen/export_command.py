@@ -20,6 +20,10 @@ def roles_of(text: str) -> dict[str, str]:
     pairs = [part.partition("=") for part in text.split(",")]
     if not all(role.strip() and name.strip() for role, _, name in pairs):
         raise typer.BadParameter(f"expected ROLE=NAME, such as id=shop,time=week, got {text!r}")
+    roles = [role.strip() for role, _, _ in pairs]
+    twice = [role for role in roles if roles.count(role) > 1]
+    if twice:
+        raise typer.BadParameter(f"expected one name for {twice[0]}, got {roles.count(twice[0])}; keep one of them")
     return {role.strip(): name.strip() for role, _, name in pairs}
 
 

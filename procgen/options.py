@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+from collections.abc import Iterable, Mapping
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated
 
@@ -13,6 +14,7 @@ from procgen.console import printed, progress
 if TYPE_CHECKING:
     from procgen.ensemble.expected import Expected
     from procgen.spec.model import Spec
+    from procgen.spec.variants import Setting
 
 Variant = Annotated[
     str | None,
@@ -45,12 +47,20 @@ Expect = Annotated[
 ]
 
 
+PLACES = {"paths": "paths", "steps": "time.steps", "seed": "seed"}  # options of their own, and where they stand
+
+
 def asked(
-    file: Path, variant: str | None, settings: list[str] | None = None, start: str | None = None
+    file: Path,
+    variant: str | None,
+    settings: list[str] | None = None,
+    start: str | None = None,
+    changed: Mapping[str, int | None] | None = None,
 ) -> dict[str, Spec]:
     """The specs meant by the options, by the name of their folder: "" alone, or base and every variant for "all".
 
-    SpecError lists every fault.
+    `changed`: what options of their own say of paths, steps and seed, which `settings` must not say too. SpecError
+    lists every fault.
     """
     import procgen as pg
     from procgen.spec.reader import settled
@@ -58,11 +68,22 @@ def asked(
 
     spec = pg.load(file)
     given = all_settings(settings or ())
+    _refuse_twice(given, changed or {})
     if start is not None:
         given = (*given, setting_of(f"time.start={start}", "--start"))
     names = {BASE: BASE, **{name: name for name in spec.variants}} if variant == ALL else {"": variant or BASE}
     specs = {folder: spec.variant(name) for folder, name in names.items()}
     return {folder: settled(one, given) for folder, one in specs.items()} if given else specs
+
+
+def _refuse_twice(given: Iterable[Setting], changed: Mapping[str, int | None]) -> None:
+    from procgen.spec.model import Fault, SpecError
+
+    options = {PLACES[name]: f"--{name}" for name, value in changed.items() if value is not None}
+    twice = [one for one in given if one.place in options]
+    if twice:
+        message = "{} is set twice, also by {}; keep one of them"
+        raise SpecError(tuple([Fault(one.spot, message.format(one.place, options[one.place])) for one in twice]))
 
 
 def one_asked(file: Path, variant: str | None, settings: list[str] | None, start: str | None) -> Spec:

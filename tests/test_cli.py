@@ -145,6 +145,8 @@ def test_export_says_what_it_writes_and_takes_numbers_of_paths(tmp_path, rendere
     again = Result("export", str(rendered), "-o", str(file), *options)
     assert again.code == 2 and "is there already; choose another name, or replace it with --overwrite" in again.err
     assert Result("export", str(rendered), "-o", str(file), *options, "--overwrite").code == 0
+    twice = Result("export", str(rendered), "-o", str(tmp_path / "no.csv"), "--columns", "path=a_,path=b_")
+    assert twice.code == 2 and "expected one name for path, got 2" in twice.err
     for wrong in (["--paths", "5-3"], ["--columns", "pump"], ["--layout", "cube"]):
         assert Result("export", str(rendered), "-o", str(tmp_path / "no.csv"), *wrong).code == 2
 
@@ -340,6 +342,14 @@ def test_more_than_the_disk_holds_is_refused_with_the_figure(tmp_path, monkeypat
     text = refused(Result("render", PUMP, "-o", str(tmp_path / "out"), *SMALL))
     assert "1000" in text or "1.00 kB" in text or "1 kB" in text
     assert not list((tmp_path / "out").glob("*.parquet"))
+
+
+@pytest.mark.parametrize(("option", "place"), [("--paths", "paths"), ("--steps", "time.steps"), ("--seed", "seed")])
+def test_what_an_option_says_is_not_set_too(tmp_path, option, place):
+    out = ["render", PUMP, "-o", str(tmp_path / "out")]
+    message = refused(Result(*out, option, "2", "--set", f"{place}=7"))
+    assert f"{place} is set twice, also by {option}; keep one of them" in message
+    assert not (tmp_path / "out").exists()
 
 
 @pytest.mark.parametrize(

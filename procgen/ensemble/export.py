@@ -47,6 +47,7 @@ def export(
     """
     path = named_path(path)
     _refuse_place(path, overwrite)
+    _refuse_source(path, ensemble)
     suffix = path.suffix.lower()
     if suffix not in (*TARGETS, ".npy"):
         raise EnsembleError(f"expected a file that ends in {', '.join(TARGETS)} or .npy, got {path.name!r}")
@@ -158,6 +159,13 @@ def _refuse_place(path: Path, overwrite: bool) -> None:
         raise EnsembleError(f"there is no folder {path.parent} to write {path.name} into; make it first")
     if path.exists() and not overwrite:
         raise EnsembleError(f"{path} is there already; choose another name, or replace it with --overwrite")
+
+
+def _refuse_source(path: Path, ensemble: Ensemble) -> None:
+    """Refuse the folder that is read: its parts would be replaced, and readers of all its files meet one more."""
+    folder = getattr(ensemble, "path", None)
+    if isinstance(folder, Path) and path.resolve().is_relative_to(folder.resolve()):
+        raise EnsembleError(f"{path} would be among the files of the ensemble itself ({folder}); choose another folder")
 
 
 @contextlib.contextmanager

@@ -354,6 +354,18 @@ def test_a_file_that_is_there_is_replaced_only_when_asked(tmp_path, demand):
         demand.export(tmp_path, overwrite=True)
 
 
+def test_the_files_of_the_ensemble_itself_are_never_written_over(tmp_path, monkeypatch):
+    made = pg.render(DEMAND, tmp_path / "out")
+    part = made.manifest.parts[0].file
+    (tmp_path / "link").symlink_to(tmp_path / "out")
+    monkeypatch.chdir(tmp_path)
+    for place in (f"out/{part}", f"link/{part}", "out/values.csv", str(tmp_path / "out" / part)):
+        with pytest.raises(EnsembleError, match="would be among the files of the ensemble itself"):
+            pg.open_ensemble("out").export(place, overwrite=True)
+    assert sorted(os.listdir("out")) == sorted(["manifest.json", *(one.file for one in made.manifest.parts)])
+    made.export("out.csv")
+
+
 @pytest.mark.parametrize("suffix", [".csv", ".xlsx", ".parquet", ".npy"])
 def test_a_stop_leaves_nothing_and_what_was_there_as_it_was(tmp_path, demand, suffix):
     path = tmp_path / f"x{suffix}"
