@@ -7,15 +7,16 @@ its digest is one of the numbers.
 from __future__ import annotations
 
 from collections import Counter
+from collections.abc import Sequence
 from dataclasses import dataclass
 from datetime import UTC, datetime
 from typing import Any
 
 import numpy as np
 
-from procgen.spec.declare import INVALID, Domain, Parameter, Real, Reals, Schema, Text, Whole, mapping_of, read_each
+from procgen.spec.declare import INVALID, Domain, Parameter, Reals, Schema, Text, Whole, mapping_of, read_each
 from procgen.spec.domains import Reading
-from procgen.spec.tables import MOST_VALUES, read_file
+from procgen.spec.tables import MOST_VALUES, Columns, has_numbers, read_file
 from procgen.spec.tree import Tree
 from procgen.spec.units import parse_date
 from procgen.spec.words import did_you_mean, one_of
@@ -56,7 +57,7 @@ class Column(Domain):
             numbers = Reals().read(tree, reader)
             return INVALID if numbers is INVALID else Recorded(0, numbers)
         before = len(reader.faults)
-        if "file" in tree.value and not self._inlined(tree, reader):
+        if not self._without_file(tree, reader):
             return INVALID
         values = read_each(tree, NUMBERS, reader)
         if len(reader.faults) > before:
@@ -65,7 +66,15 @@ class Column(Domain):
             return reader.expected(tree.value["first"], "a step of at most 0, so that step 0 has a number")
         return Recorded(values["first"], values["numbers"])
 
-    def _inlined(self, tree: Tree, reader: Reading) -> bool:
+    def _without_file(self, tree: Tree, reader: Reading) -> bool:
+        """Have numbers in the place of a file; those of a file read already are matched with the steps of today."""
+        if tree.origin is None:
+            return "file" not in tree.value or self._inlined(tree, reader, None)
+        written, table = tree.origin
+        tree.value, tree.keys = dict(written.value), written.keys
+        return self._inlined(tree, reader, table)
+
+    def _inlined(self, tree: Tree, reader: Reading, table: Columns | None) -> bool:
         """Put the numbers of the file in the place of its name; False after reporting why they cannot be."""
         before = len(reader.faults)
         asked = read_each(tree, FILE, reader)
@@ -73,19 +82,21 @@ class Column(Domain):
             reader.expected(tree, "the column of the steps or that of the times, one of them")
         if len(reader.faults) > before:
             return False
-        table = read_file(tree.value["file"], reader)
+        table = read_file(tree.value["file"], reader) if table is None else table
         by = asked["step"] or asked["time"]
         if table is INVALID or not all(has_column(table, name, tree, reader) for name in (asked["column"], by)):
             return False
-        steps = _steps(table[by], asked["time"] is not None, tree, reader, self.back)
-        numbers = [Real().read(Tree(value, tree.value["column"].place), reader) for value in table[asked["column"]]]
-        if steps is None or INVALID in numbers:
+        steps = _steps(table, by, asked["time"] is not None, tree, reader, self.back)
+        if not has_numbers(table, asked["column"], by, tree.value["file"], reader) or steps is None:
             return False
-        found = dict(zip(steps, numbers, strict=True))
-        if len(found) < len(steps):
-            double = Counter(steps).most_common(1)[0][0]
-            reader.fault(tree.value["file"], f"the table has two rows for step {double}; keep one")
+        found = {step: float(x) for step, x in zip(steps, table[asked["column"]], strict=True) if step is not None}
+        double, times = next(iter(Counter(step for step in steps if step is not None).most_common(1)), (0, 0))
+        if times > 1:
+            rows = [row for row, step in zip(table.rows, steps, strict=True) if step == double]
+            message = f"the table has two rows for step {double}; keep one ({rows[0]} or {rows[1]})"
+            reader.fault(tree.value["file"], message)
             return False
+        tree.origin = Tree(dict(tree.value), tree.place, dict(tree.keys)), table
         return self._put(tree, found, reader)
 
     def _put(self, tree: Tree, found: dict[int, float], reader: Reading) -> bool:
@@ -118,11 +129,10 @@ class Past(Column):
 
     def read(self, tree: Tree, reader: Reading) -> Any:
         reader = reader.closed()  # what was recorded is the same on every path
-        if tree.is_map and "until" not in tree.value:
-            if "file" not in tree.value:
-                return reader.expected(tree, self.describe())
-            if not self._inlined(tree, reader):
-                return INVALID
+        if tree.is_map and "until" not in tree.value and "file" not in tree.value:
+            return reader.expected(tree, self.describe())
+        if (tree.is_map or tree.origin is not None) and not self._without_file(tree, reader):
+            return INVALID
         numbers = self._cut(tree, reader) if tree.is_map else Reals().read(tree, reader)
         if numbers is not INVALID and len(numbers) > MOST_PAST:
             what = f"at most {MOST_PAST:,} numbers before step 0"
@@ -172,8 +182,9 @@ class Past(Column):
         reader.fault(
             tree,
             f"expected {len(numbers)} numbers on the steps of the spec, up to step −1 at {_time_of(-1, reader)} or "
-            f"later, got them from {values['since']} to {values['until']}; change the spec's start or step, or give "
-            "other numbers",
+            f"later, got them from {values['since']} to {values['until']}, where the start was another when the file "
+            "was read; change the spec's start or step where its file is still named, or give before anew with it, as "
+            "in {file: history.csv, column: load, time: at}",
         )
         return INVALID
 
@@ -187,7 +198,7 @@ def _time_of(step: int, reader: Reading) -> str:
     return datetime.fromtimestamp(reader.grid.stamps(step, 1).tolist()[0] / 1e6, UTC).isoformat()
 
 
-def has_column(table: dict[str, list[Any]], name: str, tree: Tree, reader: Reading) -> bool:
+def has_column(table: Columns, name: str, tree: Tree, reader: Reading) -> bool:
     """Whether the table of the file named in `tree` has a column; False after reporting that it has not."""
     if name in table:
         return True
@@ -217,14 +228,16 @@ def _put(tree: Tree, found: dict[int, float], reader: Reading) -> bool:
     return True
 
 
-def _steps(values: list[Any], times: bool, tree: Tree, reader: Reading, back: int) -> list[int] | None:
-    """The step of each row, or None after reporting what is none."""
-    grid = reader.grid
+def _steps(
+    table: Columns, by: str, times: bool, tree: Tree, reader: Reading, back: int
+) -> Sequence[int | None] | None:
+    """The step of each row, None for rows far behind the last step; or None after reporting what is none."""
+    values, grid = table[by], reader.grid
     if not times:
-        wrong = next((v for v in values if isinstance(v, bool) or not isinstance(v, int)), None)
+        wrong = next((i for i, v in enumerate(values) if isinstance(v, bool) or not isinstance(v, int)), None)
         if wrong is None:
             return values
-        _refused(f"whole numbers in column {tree.value['step'].value}", wrong, tree, reader)
+        _refused("whole numbers", by, wrong, table, tree, reader)
         return None
     if grid is None:
         return None
@@ -232,23 +245,26 @@ def _steps(values: list[Any], times: bool, tree: Tree, reader: Reading, back: in
         reader.fault(tree.value["time"], "times need time: {start: …, every: …}; give them, or match by step")
         return None
     span = np.arange(-len(values) - back, min(grid.steps, MOST_VALUES) + len(values))
-    by_utc = dict(zip(grid.stamps(int(span[0]), len(span)).tolist(), span.tolist(), strict=True))
-    clocks = grid.local(span + (grid.stamp == "end")).tolist()
+    stamps, clocks = grid.stamps(int(span[0]), len(span)).tolist(), grid.local(span + (grid.stamp == "end")).tolist()
+    by_utc = dict(zip(stamps, span.tolist(), strict=True))
     by_clock = dict(zip(clocks[::-1], span.tolist()[::-1], strict=True))  # of two that happen twice, the first
-    steps = []
-    for value in values:
+    steps: list[int | None] = []
+    for i, value in enumerate(values):
         moment = value if isinstance(value, datetime) else parse_date(str(value))
         if moment is None:
-            _refused(f"a date, or a date and time, in column {tree.value['time'].value}", value, tree, reader)
+            _refused("a date, or a date and time,", by, i, table, tree, reader)
             return None
         known, at = (by_clock, moment.replace(tzinfo=UTC)) if moment.tzinfo is None else (by_utc, moment)
-        step = known.get(round(at.timestamp() * 1e6))
-        if step is None:
-            reader.fault(tree.value["file"], f"no step is at {value}; take that row out, or change the spec's time")
+        micro, ends = round(at.timestamp() * 1e6), clocks if known is by_clock else stamps
+        if micro not in known and micro <= ends[-1]:
+            none = f"no step is at {value}; take that row out ({table.rows[i]}), or change the spec's time"
+            old = f"{value} ({table.rows[i]}) lies more than {-span[0]:,} steps before step 0; take out older rows"
+            reader.fault(tree.value["file"], none if micro > ends[0] else f"{old}, or change the spec's start")
             return None
-        steps.append(step)
+        steps.append(known.get(micro))
     return steps
 
 
-def _refused(expected: str, value: Any, tree: Tree, reader: Reading) -> None:
-    reader.fault(tree.value["file"], f"expected {expected}, got {value!r}")
+def _refused(expected: str, by: str, row: int, table: Columns, tree: Tree, reader: Reading) -> None:
+    message = f"expected {expected} in column {by}, got {table[by][row]!r} on {table.rows[row]}"
+    reader.fault(tree.value["file"], message)

@@ -11,7 +11,7 @@ from typing import Any
 from procgen.spec.columns import has_column
 from procgen.spec.declare import INVALID, Domain, Parameter, Real, Reals, Schema, Text, mapping_of, read_each
 from procgen.spec.domains import Reading
-from procgen.spec.tables import read_file
+from procgen.spec.tables import has_numbers, read_file
 from procgen.spec.tree import Tree
 
 FILE = (
@@ -44,6 +44,8 @@ class Sample(Domain):
             return False
         table = read_file(tree.value["file"], reader)
         if table is INVALID or not has_column(table, asked["column"], tree, reader):
+            return False
+        if not has_numbers(table, asked["column"], None, tree.value["file"], reader):
             return False
         place = tree.value["column"].place
         trees = tuple([Tree(value, place) for value in table[asked["column"]]])

@@ -17,12 +17,17 @@ from procgen.spec.domains import Reading
 from procgen.spec.draws import TableDraw
 from procgen.spec.model import Frozen
 from procgen.spec.named import Named
-from procgen.spec.tree import Tree
-from procgen.spec.words import did_you_mean, one_of
+from procgen.spec.tree import Tree, show_scalar
+from procgen.spec.words import did_you_mean, one_of, unquote
 
 TABLE = "from_table"
 MOST_VALUES = 50_000  # they become a part of the spec
-Columns = dict[str, list[Any]]
+
+
+class Columns(dict[str, list[Any]]):
+    """The columns of a file by name; `rows` says of each row where it stands, for people: "line 7" or "row 6"."""
+
+    rows: Sequence[str] = ()
 
 
 class Values(Domain):
@@ -74,6 +79,8 @@ def _inlined(tree: Tree, values: dict[str, Any], column: str, reader: Reading) -
     if table is INVALID or not _has(table, (key, name), tree, reader):
         return INVALID
     place = tree.value["file"].place
+    if not has_numbers(table, name, key, tree.value["file"], reader):
+        return INVALID
     numbers = [Tree(value, place) for value in table[name]]
     if key == "series":
         names = [str(value) for value in table[key]]
@@ -107,13 +114,13 @@ def read_file(tree: Tree, reader: Reading) -> Any:
     """Return the columns of the file named at `tree`, by name, or INVALID after reporting why it cannot be read."""
     if not isinstance(tree.value, str):
         return reader.expected(tree, "the path of a CSV or Parquet file")
-    path = Path(tree.value)
-    if tree.place.file and not path.is_absolute():
-        path = Path(tree.place.file).parent / path
+    beside = tree.place.file if tree.place.file and not tree.place.file.startswith("--") else None
+    path = Path(beside or "").parent / tree.value
     try:
         columns = _parquet(path) if path.suffix == ".parquet" else _csv(path)
     except FileNotFoundError:
-        reader.fault(tree, f"there is no file {path}; a path is taken from the folder of the spec")
+        folder = "the folder of the spec" if beside else "the current folder where no file of a spec has it"
+        reader.fault(tree, f"there is no file {path.absolute()}; a path is taken from {folder}")
         return INVALID
     except (OSError, ValueError, csv.Error) as error:
         reader.fault(tree, f"cannot read the table {path}: {str(error).splitlines()[0]}")
@@ -125,15 +132,39 @@ def read_file(tree: Tree, reader: Reading) -> Any:
     return columns
 
 
+def has_numbers(table: Columns, name: str, by: str | None, tree: Tree, reader: Reading) -> bool:
+    """Whether a column has a number in every row; False after reporting, once, the first row that has none.
+
+    `by` is the column that says whose the row is: its step, time, path or series.
+    """
+    wrong = [i for i, value in enumerate(table[name]) if not _is_number(value)]
+    if not wrong:
+        return True
+    value, whose = table[name][wrong[0]], f", where {by} is {table[by][wrong[0]]}" if by else ""
+    others = f"; {len(wrong) - 1} other rows have none either" if len(wrong) > 2 else "; one other row has none either"
+    hint = "fill what is empty, or take such rows out" if value in ("", None) else unquote(value) or "mend the table"
+    message = f"expected a number, got {show_scalar(value)} in column {name} on {table.rows[wrong[0]]}{whose}"
+    reader.fault(tree, message + (others if len(wrong) > 1 else "") + f"; {hint}")
+    return False
+
+
+def _is_number(value: Any) -> bool:
+    return isinstance(value, int | float) and not isinstance(value, bool) and math.isfinite(value)
+
+
 def _csv(path: Path) -> Columns:
     with open(path, encoding="utf-8-sig", newline="") as file:
-        rows = [row for row in csv.reader(file) if row]
+        lines = csv.reader(file)
+        found = [(row, lines.line_num) for row in lines if row]
+    rows, ends = [row for row, _ in found], [end for _, end in found]
     if len(rows) < 2:
         raise ValueError("expected a line of names, and lines of values under it")
     short = next((i for i, row in enumerate(rows) if len(row) != len(rows[0])), None)
     if short is not None:
-        raise ValueError(f"row {short + 1} has {len(rows[short])} cells, and there are {len(rows[0])} names")
-    return {name.strip(): [_cell(row[i].strip()) for row in rows[1:]] for i, name in enumerate(rows[0])}
+        raise ValueError(f"line {ends[short]} has {len(rows[short])} cells, and there are {len(rows[0])} names")
+    columns = Columns({name.strip(): [_cell(row[i].strip()) for row in rows[1:]] for i, name in enumerate(rows[0])})
+    columns.rows = [f"line {end}" for end in ends[1:]]
+    return columns
 
 
 def _cell(text: str) -> Any:
@@ -152,7 +183,9 @@ def _parquet(path: Path) -> Columns:
 
     if not path.exists():
         raise FileNotFoundError(path)
-    return pq.read_table(path).to_pydict()
+    columns = Columns(pq.read_table(path).to_pydict())
+    columns.rows = [f"row {i}" for i in range(1, 1 + max(map(len, columns.values()), default=0))]
+    return columns
 
 
 __all__ = ["LOOKUP", "TABLE", "Frozen", "read_file", "read_lookup"]

@@ -34,6 +34,7 @@ class Tree:
     value: Any  # None, bool, int, float or str; tuple[Tree, ...]; dict[str, Tree]
     place: Place
     keys: dict[str, Tree] = field(default_factory=dict)  # of a mapping: each key as a text with its own place
+    origin: Any = None  # what stood here before the values of a file did, and the file's table
 
     @property
     def is_map(self) -> bool:
@@ -99,9 +100,13 @@ def from_data(data: Any, file: str | None, faults: list[Fault]) -> Tree:
         count += 1
         place = Place(file, 0, 0, path)
         check_size(count, depth, place)
+        if getattr(value, "ndim", 0) and callable(getattr(value, "tolist", None)):  # an array, or a column of a table
+            if getattr(value, "size", 0) > MAX_NODES:
+                check_size(value.size, depth, place)
+            value = value.tolist()
         if isinstance(value, Mapping):
             return branch(value, path, depth, place)
-        if isinstance(value, (list, tuple)):
+        if isinstance(value, (list, tuple, range)):
             return Tree(tuple([grow(v, f"{path}[{i}]", depth + 1) for i, v in enumerate(value)]), place)
         return Tree(leaf(value, place), place)
 

@@ -159,9 +159,9 @@ def _without(tree: Tree, key: str) -> Tree:
 
 def _pruned(tree: Tree) -> Tree:
     if tree.is_map:
-        return Tree({k: _pruned(t) for k, t in tree.value.items() if t.value is not OUT}, tree.place, tree.keys)
+        return replace(tree, value={k: _pruned(t) for k, t in tree.value.items() if t.value is not OUT})
     if tree.is_list:
-        return Tree(tuple([_pruned(t) for t in tree.value if t.value is not OUT]), tree.place)
+        return replace(tree, value=tuple([_pruned(t) for t in tree.value if t.value is not OUT]))
     return tree
 
 

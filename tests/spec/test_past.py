@@ -54,9 +54,21 @@ def test_another_start_reads_the_record_up_to_it_or_says_that_it_ends_before(tmp
     days("2027-03-01", 12).to_csv(tmp_path / "h.csv", index=False)
     spec = pg.load(spec_file(tmp_path, {**FILE, "time": "day"}, DAILY))
     assert spec.set({"time.start": "2027-03-08"}).series["x"].before == tuple(range(1, 8))
-    for place, value in (("time.start", "2027-03-11"), ("time.every", "12h"), ("time.start", "2027-02-01")):
-        with pytest.raises(pg.SpecError, match="expected 9 numbers on the steps of the spec, up to step −1 at 2027"):
+    assert spec.set({"time.start": "2027-03-11"}).series["x"].before == tuple(range(1, 11))
+    (tmp_path / "h.csv").unlink()  # it was read once, whole
+    assert spec.set({"time.start": "2027-03-13"}).series["x"].before == tuple(range(1, 13))
+    for place, value, message in (
+        ("time.every", "12h", "up to step −1, .* its last row before step 0 is that of step -2"),
+        ("time.start", "2027-03-14", "up to step −1, .* its last row before step 0 is that of step -2"),
+        ("time.start", "2027-02-01", "up to step −1, .* all its rows lie later"),
+        ("time.start", "1927-02-01", "up to step −1, .* all its rows lie later"),
+        ("time.start", "2127-02-01", r"2027-03-01 \(line 2\) lies more than 10,012 steps before step 0"),
+    ):
+        with pytest.raises(pg.SpecError, match=message):
             spec.set({place: value})
+    later = {**spec.raw, "time": {**DAILY, "start": "2027-03-11"}}
+    with pytest.raises(pg.SpecError, match=r"up to step −1 at 2027.* where the start was another when the file was"):
+        pg.load(later)
     assert spec.set({"series.x.before": [1, 2]}).series["x"].before == (1.0, 2.0)
     assert spec.set({"series.x.before": None}).series["x"].before is None
 
@@ -71,7 +83,14 @@ def without(table, *rows):
         (days("2027-02-20", 10), r"expected rows up to step −1, .* its last row before step 0 is that of step -9; add"),
         (days("2027-03-10", 3), r"expected rows up to step −1, .* all its rows lie later; add what is missing"),
         (without(days("2027-03-01", 9), 4), r"the table has nothing for step -5, and more before it; fill the gap"),
-        (days("2027-03-01", 9).replace(5.0, np.nan), r'expected a number, got ""'),
+        (
+            days("2027-03-01", 9).replace(5.0, np.nan),
+            r'expected a number, got "" in column load on line 6, where day is 2027-03-05; fill what is empty',
+        ),
+        (
+            days("2027-03-01", 9).assign(load="50,5"),
+            r'got "50,5" in column load on line 2, .* 8 other rows have none either; write the decimal sign as a',
+        ),
         (days("2027-03-01", 9).replace("2027-03-05", "2027-03-05T11:00"), r"no step is at 2027-03-05T11:00; take that"),
         (pd.concat([days("2027-03-01", 9)] * 2), r"the table has two rows for step -9; keep one"),
         (days("2027-03-01", 9).rename(columns={"load": "lode"}), r"the table has no column load; .* did you mean lode"),
@@ -203,3 +222,41 @@ def test_what_differs_and_what_moves_is_told(tmp_path):
     assert [str(c) for c in changes(old, new)] == ["series.x.before: 8 values, the last 6.0 → 9 values, the last 7.0"]
     assert recipes(new)["x"].moved_from(recipes(old)["x"]) == ("x.ar",)
     assert recipes(new)["y"].moved_from(recipes(old)["y"]) == ()
+
+
+def test_a_variant_with_another_start_reads_the_record_up_to_it(tmp_path):
+    days("2027-03-01", 12).to_csv(tmp_path / "h.csv", index=False)
+    later = {"variants": {"later": {"time.start": "2027-03-12"}}}
+    spec = pg.load(spec_file(tmp_path, {**FILE, "time": "day"}, DAILY, **later))
+    assert spec.variant("later").series["x"].before == tuple(range(1, 12))
+    assert spec.variant("later").variant("base").series["x"].before == tuple(range(1, 12))
+    assert spec.series["x"].before == tuple(range(1, 10))
+
+
+def test_a_file_that_is_not_there_is_told_with_the_folder_that_was_looked_in(tmp_path, monkeypatch):
+    spec = spec_file(tmp_path, {**FILE, "time": "day"}, DAILY)
+    (said,) = faults(spec)
+    assert said == f"there is no file {tmp_path / 'h.csv'}; a path is taken from the folder of the spec"
+    days("2027-03-01", 12).to_csv(tmp_path / "h.csv", index=False)
+    (tmp_path / "elsewhere").mkdir()
+    monkeypatch.chdir(tmp_path / "elsewhere")
+    with pytest.raises(pg.SpecError) as error:
+        pg.load(spec).set({"series.x.before": {**FILE, "time": "day"}})
+    assert f"there is no file {tmp_path / 'elsewhere' / 'h.csv'}; a path is taken from the current" in str(error.value)
+
+
+@pytest.mark.parametrize("sort", [np.array, pd.Series, tuple, lambda values: range(1, 6)])
+def test_arrays_and_columns_are_lists(sort):
+    raw = {**HEAD, "series": {"x": {"of": AR, "before": sort([1, 2, 3, 4, 5])}}}
+    spec = pg.load(raw)
+    assert spec.series["x"].before == (1.0, 2.0, 3.0, 4.0, 5.0)
+    assert spec.digest() == pg.load({**HEAD, "series": {"x": {"of": AR, "before": [1, 2, 3, 4, 5]}}}).digest()
+    assert spec.set({"series.x.before": sort([1, 2, 3, 4, 5])}).digest() == spec.digest()
+
+
+def test_arrays_that_are_no_numbers_or_too_long_are_one_fault():
+    def said(before):
+        return faults({**HEAD, "series": {"x": {"of": AR, "before": before}}})
+
+    assert len(said(np.arange(200_000.0))) == 1
+    assert len(said(np.full(5, np.nan))) == 1

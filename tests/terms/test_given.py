@@ -103,3 +103,14 @@ def test_a_table_that_does_not_fit_is_refused(tmp_path, rows, message):
 def test_a_file_that_is_not_there_is_named(tmp_path):
     (found,) = faults(spec_file(tmp_path, {"file": "w.csv", "column": "degrees", "time": "at"}))
     assert found.startswith("there is no file") and "w.csv" in found
+
+
+def test_another_start_finds_the_rows_of_its_own_times(tmp_path):
+    days = pd.date_range("2027-03-01", periods=9, freq="D").strftime("%Y-%m-%d")
+    pd.DataFrame({"at": days, "degrees": range(1, 10)}).to_csv(tmp_path / "w.csv", index=False)
+    time = {"start": "2027-03-02", "every": "1d", "steps": 4}
+    spec = pg.load(spec_file(tmp_path, {"file": "w.csv", "column": "degrees", "time": "at"}, time))
+    assert pg.render(spec)["x"][0].tolist() == [2, 3, 4, 5]
+    assert pg.render(spec.set({"time.start": "2027-03-05"}))["x"][0].tolist() == [5, 6, 7, 8]
+    with pytest.raises(pg.SpecError, match="the table has nothing for step 0"):
+        spec.set({"time.start": "2027-04-05"})
