@@ -149,11 +149,11 @@ def sample_mean(
     `hidden` is a skewness that the numbers may have though this sample does not show it; `times` the
     skewness that it does show is allowed for.
     """
-    return _known_sd(sample, theory, sd) if sd is not None else _studentised(sample, theory, hidden, times)
+    return _known_sd(sample, theory, sd, hidden) if sd is not None else _studentised(sample, theory, hidden, times)
 
 
-def _known_sd(sample: Sample, theory: float, sd: float) -> Finding:
-    """The skewness is that of the sample, give or take its own error, whichever makes p larger.
+def _known_sd(sample: Sample, theory: float, sd: float, hidden: float) -> Finding:
+    """The skewness is that of the sample, give or take its own error, or the hidden one, whichever makes p largest.
 
     Given a mean that is off by z standard errors, the sample's skewness is off by (excess - 1.5 skew²) z/sqrt(n) on
     average: for numbers with short tails it is too small just when p is, and that is put back.
@@ -166,7 +166,8 @@ def _known_sd(sample: Sample, theory: float, sd: float) -> Finding:
 
     def log_p(z: float) -> float:
         skew = sample.skew / math.sqrt(n) + short * z / n
-        sides = (tails.pearson3(z, skew - doubtful), tails.pearson3(z, skew + doubtful))
+        possible = skew - doubtful, skew + doubtful, math.copysign(hidden, sample.skew) / math.sqrt(n)
+        sides = [tails.pearson3(z, each) for each in (possible if hidden > abs(sample.skew) else possible[:2])]
         return max(tails.two_sided(*side) for side in sides) + tails.lift(z, excess / n)
 
     return Finding(

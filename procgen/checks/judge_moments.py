@@ -81,7 +81,7 @@ def _mean_and_variance(gather: Gather, column: int, i: int) -> Iterator[Check]:
             yield Check.of(plan.name, "variance", _at(plan, i), "spread", variance)
         return
     sample = sample_of(gather.deviations, k)
-    yield limit(plan, "mean", _at(plan, i), "level", sample, mu, 1, math.sqrt(sigma2))
+    yield limit(plan, "mean", _at(plan, i), "level", sample, mu, 1, math.sqrt(sigma2), plan.skewness(1))
     product = gather.plan.products.index((column, i, i))
     sd = None if plan.coarse[i] else plan.product_sd.get((i, i))
     sample, hidden = sample_of(gather.products, product), plan.skewness(2) if sd is None else 0.0

@@ -67,9 +67,26 @@ def _average(plan: SeriesPlan, pool: Pool, k: int, lag: int, sample: Sample) -> 
     if lag > 0 and pool.slope is not None:
         variance = float(pool.covariance[0].mean())
         slope = float(np.nanmean(pool.slope[k - 1]))
-        return limit(plan, "slope over steps", probe, kind, sample.scaled(1 / variance), slope, 2, None)
+        hidden = _hidden(plan, pool, lag, slope)
+        return limit(plan, "slope over steps", probe, kind, sample.scaled(1 / variance), slope, 2, None, hidden)
     sd = plan.square_sd if lag == 0 and sample.n >= FEW_PATHS else None
-    return limit(plan, what, probe, kind, sample, theory, 1 if lag < 0 else 2, sd)
+    return limit(plan, what, probe, kind, sample, theory, 1 if lag < 0 else 2, sd, _hidden(plan, pool, lag))
+
+
+def _hidden(plan: SeriesPlan, pool: Pool, lag: int, slope: float = 0.0) -> float:
+    """The skewness of a path's average, by theory, which a sample shows only when it has met the tail.
+
+    It is that of one step over the root of the number of steps, of those that repeat each other one. A product of
+    rare values needs two of them: of the share p = 1 / skewness² of steps that has one, so many go on to another
+    as the slope says, and by accident the share p of the rest.
+    """
+    steps = pool.last - pool.first - max(lag, 0)
+    skew, repeats = plan.skewness(2 if lag == 0 else 1), 1.0
+    found = plan.theory.variance_of_mean(np.array([steps])) if skew and pool.steady else None
+    if found is not None and math.isfinite(found[0]) and plan.drawn[-1] > 0:
+        repeats = max(1.0, steps * float(found[0]) / float(plan.drawn[-1]))
+    pairs = skew * skew / (1.0 + min(abs(slope), 1.0) * skew * skew) if lag > 0 else 1.0
+    return skew * math.sqrt(pairs * repeats / steps)
 
 
 def _change(plan: SeriesPlan, each: Changes, sample: Sample) -> Check:

@@ -21,6 +21,7 @@ from procgen.checks.scores import Scores
 from procgen.theory.mixedlaw import Normal
 
 PAIR_LIMIT = 36  # pairs of series that are compared
+_RARE = 9.0  # the kurtosis, that of the exponential law, beyond which a few rare values make most of the spread
 
 
 def probe_steps(steps: int) -> tuple[int, ...]:
@@ -81,12 +82,22 @@ class SeriesPlan:
     def skewness(self, order: int) -> float:
         """The largest size of the skewness of deviations (order 1) or their squares (order 2), where laws are known.
 
-        A sample of a law with a long tail does not show its skewness until it has met the tail.
+        A sample of a law with a long tail does not show its skewness until it has met the tail. Where no law is known,
+        that of rare events follows from the kurtosis: skewness² is at most kurtosis − 1, and so much where there are
+        only two values (Pearson 1916).
         """
         if order not in self._skewness:
             found = [summand(scores.distribution, lambda z: z**order).skew for scores in self.scores.values()]
-            self._skewness[order] = max(map(abs, found), default=0.0)
+            self._skewness[order] = max(map(abs, found), default=self._of_rare)
         return self._skewness[order]
+
+    @cached_property
+    def _of_rare(self) -> float:
+        if self.unknown or not self.highest > 4:
+            return 0.0
+        found = [self.theory.excess_kurtosis_at(int(step)) for step in {self.steps[0], self.steps[-1]}]
+        excess = max((each for each in found if each is not None and math.isfinite(each)), default=0.0)
+        return math.sqrt(excess + 2.0) if excess + 3.0 > _RARE else 0.0
 
     @cached_property
     def square_sd(self) -> float | None:

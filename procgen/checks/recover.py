@@ -58,6 +58,7 @@ class Route:
     watched: tuple[str, ...] = ()  # events with a known chance that are counted on the way
     ranked: float | None = None  # the grain, which ranks take in exactly, where ranks given the past stand for shocks
     few: Few | None = None  # how shocks of a law of few values are told apart; what comes out are then ranks
+    salt: str = ""  # told apart by it: what spreads the values of one seed is not what spreads those of another
     stopped: str = ""  # why a tile could not be undone
     _means: OrderedDict[tuple[int, int], NDArray] = field(default_factory=OrderedDict, repr=False)
 
@@ -75,21 +76,24 @@ class Route:
     def tile(self, x: NDArray, carrier: Any, first_path: int, first_step: int) -> tuple[NDArray, Any]:
         """Standardised shocks (steps, paths) of the next tile of values, and the carrier after it."""
         if self.ranked is not None and carrier is not None:
-            v = dither(first_path, x.shape[1], first_step, x.shape[0], self.series) + 0.5
+            v = self._dither(x, first_path, first_step) + 0.5
             with np.errstate(all="ignore"):
                 z = carrier.tile(x, v)
             return self._taken(z, x, carrier)
         if self.grain:
-            x = x + self.grain * dither(first_path, x.shape[1], first_step, x.shape[0], self.series)
+            x = x + self.grain * self._dither(x, first_path, first_step)
         if self.kalman is not None:
             return self.kalman.innovations(x - self._mean(first_step, len(x)), carrier, first_step)
         if carrier is not None:
             with np.errstate(all="ignore"):
                 z = carrier.tile(x)
             if self.few is not None and isinstance(z, np.ndarray):
-                z = self.few.ranks(z, dither(first_path, x.shape[1], first_step, x.shape[0], self.series + " ") + 0.5)
+                z = self.few.ranks(z, self._dither(x, first_path, first_step, " ") + 0.5)
             return self._taken(z, x, carrier)
         return np.full(x.shape, np.nan), None
+
+    def _dither(self, x: NDArray, first_path: int, first_step: int, end: str = "") -> NDArray:
+        return dither(first_path, x.shape[1], first_step, x.shape[0], self.series + self.salt + end)
 
     def _taken(self, z: Any, x: NDArray, carrier: Any) -> tuple[NDArray, Any]:
         """What came out of a carrier; what could not be undone once is not taken up again."""

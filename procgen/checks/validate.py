@@ -131,6 +131,8 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
     for name, declared in spec.series.items():
         grain = grain_of(declared, th[name], steps)
         way = route(name, th[name], graph, grain, same_draws)
+        if isinstance(way, Route):
+            way.salt = f" of seed {spec.seed}"
         blind = isinstance(way, Cannot) or way.scores is None
         plan = plan_series(name, th[name], steps, grain, _periods(graph, name), blind)
         plan.may_stay = may_stay(th[name], graph, name)

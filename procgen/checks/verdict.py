@@ -16,6 +16,7 @@ from numpy.typing import ArrayLike, NDArray
 from procgen.checks.coverage import Coverage, blind, coverage, title
 from procgen.checks.judge import Finding
 
+USUAL = 0.001  # chance of a false alarm
 KINDS = ("structure", "level", "spread", "memory", "clustering", "law", "dependence")
 COLUMNS = (
     "series", "what", "probe", "theory", "estimate", "standard_error", "p", "detectable", "outcome", "note",
@@ -203,7 +204,9 @@ def _judge(rows: list[Check], false_alarm: float) -> None:
     """Outcomes and detectable sizes. What cannot be trusted down to the level needed leaves the family first."""
     judged = [row for row in rows if row.log_p is not None and not row.outcome]
     for _ in range(2):
-        level = false_alarm / max(1, len(judged))
+        # The same checks are judged at every level but the strictest: what would be untestable at one is no finding at
+        # another, which asks for less.
+        level = min(false_alarm, USUAL) / max(1, len(judged))
         for row in judged:
             reason = row.finding.doubt(level) if row.finding else None
             if reason:
