@@ -13,7 +13,7 @@ from procgen.ensemble.beside import First, common, note, side_by_side
 from procgen.ensemble.ensemble import Ensemble, open_ensemble
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.manifest import Manifest
-from procgen.ensemble.places import Place, place_of
+from procgen.ensemble.places import Place, Remote, place_of
 from procgen.ensemble.plan import Block
 from procgen.ensemble.seal import refuse_changed
 from procgen.ensemble.source import read_spec
@@ -51,7 +51,8 @@ class SeriesDifference:
     ----------
     name : str
     state : str
-        "equal", "differs", "new" (only in b) or "gone" (only in a).
+        "equal", "differs", "new" (only in b), "gone" (only in a) or "renamed" (the same recipe and draws, in a
+        under the name `was`).
     first : First or None
         The first value that differs, by path and then by step: `.path`, `.step`, `.a`, `.b`; None where specs alone
         were compared.
@@ -66,6 +67,7 @@ class SeriesDifference:
     first: First | None = None
     moved: tuple[str, ...] = ()
     shares: bool = False
+    was: str = ""
 
 
 @dataclass(frozen=True)
@@ -162,7 +164,9 @@ def difference(a: Any, b: Any, at: Sequence[int] | None = None, progress: Tick |
     steps = _steps(at, block or Block(0, 1, 0, min(left.whole.steps, right.whole.steps)))
     meaning = (*changes(left.spec, right.spec), *_ranges(left, right))
     before, after = recipes(left.spec), recipes(right.spec)
-    series = [_stated(name, before.get(name), after.get(name)) for name in dict.fromkeys([*after, *before])]
+    was = _renamed(before, after)
+    names = [name for name in dict.fromkeys([*after, *before]) if name not in was.values()]
+    series = [_stated(name, before.get(name), after.get(name), was.get(name, "")) for name in names]
     paired: list[Paired] = []
     if block is not None:
         series, paired = _seen(series, left, right, block, steps, progress)
@@ -176,8 +180,22 @@ def _ranges(a: Side, b: Side) -> tuple[Change, ...]:
     return (Change("range of paths", *(f"{one.first_path}–{one.end_path - 1}" for one in (a.whole, b.whole))),)
 
 
-def _stated(name: str, before: Recipe | None, after: Recipe | None) -> SeriesDifference:
+def _renamed(before: Mapping[str, Recipe], after: Mapping[str, Recipe]) -> dict[str, str]:
+    """The former names of series that have another one now and are otherwise the same, where these draw something."""
+    gone = [name for name in before if name not in after and before[name].draws]
+    found: dict[str, str] = {}
+    for name in after if gone else ():
+        same = [old for old in gone if name not in before and not after[name].moved_from(before[old])]
+        if same:
+            found[name] = same[0]
+            gone.remove(same[0])
+    return found
+
+
+def _stated(name: str, before: Recipe | None, after: Recipe | None, was: str = "") -> SeriesDifference:
     """What must become of a series by its recipes."""
+    if was:
+        return SeriesDifference(name, "renamed", was=was, shares=True)
     if before is None or after is None:
         return SeriesDifference(name, "new" if before is None else "gone")
     moved = after.moved_from(before)
@@ -246,6 +264,8 @@ def _side(given: Any) -> Side:
             return Side(str(path), found.spec, found)
         if path.suffix == ".json":
             return _of_manifest(path)
+        if isinstance(path, Remote):
+            raise EnsembleError(f"there is no ensemble at {path}; give the URL of one, or a spec on this machine")
         return Side(str(path), spec_of(given), None)
     spec = spec_of(given)
     variant = spec.written.variant if spec.written is not None else ""

@@ -13,6 +13,7 @@ if TYPE_CHECKING:
     from procgen.checks.difference import Difference, SeriesDifference, Side
 
 MOST = 20  # names in one line
+STATES = ("renamed", "new", "gone", "differs")
 LINES = 60  # of a list; all is in --json
 
 
@@ -47,7 +48,7 @@ def _side(side: Side) -> str:
 
 
 def _headline(difference: Difference) -> str:
-    counts = {state: sum(1 for one in difference.series if one.state == state) for state in ("new", "gone", "differs")}
+    counts = {state: sum(1 for one in difference.series if one.state == state) for state in STATES}
     equal = sum(1 for one in difference.series if one.state == "equal")
     said = [f"{count} {'differing' if state == 'differs' else state}" for state, count in counts.items() if count]
     said.append(f"all {'others ' if said else ''}equal" if equal and not counts["differs"] else f"{equal} equal")
@@ -73,7 +74,9 @@ def _series(difference: Difference) -> Iterator[str]:
     if equal:
         yield f"  equal: {', '.join(equal[:MOST])}{', …' if len(equal) > MOST else ''}"
     for one in difference.series:
-        if one.state in ("new", "gone"):
+        if one.state == "renamed":
+            yield f"  renamed: {one.was} → {one.name} (same draws)"
+        elif one.state in ("new", "gone"):
             yield f"  {one.name}: {'new in b' if one.state == 'new' else 'gone, only in a'}"
         elif one.state == "differs":
             yield f"  {one.name}: {_why(one, difference)}"

@@ -18,6 +18,7 @@ from procgen.spec.varying import PATH, Varying, replaced
 from procgen.terms import catalogue
 from procgen.terms.graph import Graph, build
 
+AGAIN = "again"  # with the place among what was met, since names need not tell
 Part = tuple[str, Hashable]
 Address = tuple[Hashable, ...]
 
@@ -36,18 +37,23 @@ class Recipe:
         """
         if [part for _, part in self.parts] == [part for _, part in other.parts]:
             return ()
-        mine, theirs = self._by_name(), other._by_name()
-        names = [name for name in {**theirs, **mine} if mine.get(name) != theirs.get(name)]
-        return tuple(names) or ("the order of terms",)
+        for exact in (False, True):
+            mine, theirs = self._by_name(exact), other._by_name(exact)
+            names = [name for name in {**theirs, **mine} if mine.get(name) != theirs.get(name)]
+            if names:
+                return tuple(names)
+        return ("the order of terms",)
 
     def shares(self, other: Recipe) -> bool:
         """Return whether some draw is the same, or nothing is drawn in either."""
         return bool(self.draws & other.draws) or not (self.draws or other.draws)
 
-    def _by_name(self) -> dict[str, list[Hashable]]:
+    def _by_name(self, exact: bool) -> dict[str, list[Hashable]]:
+        """Return the parts by name; unless `exact`, whatever place in the recipe one has that was met before."""
         found: dict[str, list[Hashable]] = {}
         for name, part in self.parts:
-            found.setdefault(name, []).append(part)
+            met = isinstance(part, tuple) and part[0] == AGAIN
+            found.setdefault(name, []).append(AGAIN if met and not exact else part)
         return found
 
 
@@ -77,21 +83,21 @@ class _Kitchen:
     def recipe(self, name: str) -> Recipe:
         series = self.spec.series[name]
         parts: list[Part] = [(f"{name} as stored", (series.type, series.decimals))]
-        self._body(name, parts, set())
+        self._body(name, parts, {id(self.bodies[name]): 0})
         draws = {part[1][-1] for part in parts if isinstance(part[1], tuple) and len(part[1]) == _SIZE}
         return Recipe(tuple(parts), frozenset(address for address in draws if address is not None))
 
-    def _body(self, owner: str, parts: list[Part], seen: set[int]) -> None:
+    def _body(self, owner: str, parts: list[Part], seen: dict[int, int]) -> None:
         parts.append((owner, ("a sum of", len(self.bodies[owner]))))
         for entry in self.bodies[owner]:
             self._entry(entry, owner, parts, seen)
 
-    def _entry(self, entry: Entry, owner: str, parts: list[Part], seen: set[int], starts: bool = True) -> None:
+    def _entry(self, entry: Entry, owner: str, parts: list[Part], seen: dict[int, int], starts: bool = True) -> None:
         name = f"{owner}.{entry.label}"
         if id(entry) in seen:
-            parts.append((name, "again"))
+            parts.append((name, (AGAIN, seen[id(entry)])))
             return
-        seen.add(id(entry))
+        seen[id(entry)] = len(seen)
         if id(entry) not in self.known:
             self.known[id(entry)] = self._own(entry, owner)
         parts.append((name, self.known[id(entry)]))
@@ -105,21 +111,25 @@ class _Kitchen:
         for other, label in self._starts_with(name) if starts else ():  # all that lead it: they need not say theirs
             self._entry(self.entries[other][label], other, parts, seen, starts=False)
 
-    def _used(self, name: str, parts: list[Part], seen: set[int]) -> None:
+    def _used(self, name: str, parts: list[Part], seen: dict[int, int]) -> None:
         owner, *rest = name.split(".")
         if rest:
             output = ".".join(rest[1:])
             parts.append((name, ("used", output)))
             self._entry(_with_output(self.entries[owner][rest[0]], output), owner, parts, seen)
         elif id(self.bodies[owner]) in seen:
-            parts.append((owner, "again"))
+            parts.append((owner, (AGAIN, seen[id(self.bodies[owner])])))
         else:
-            seen.add(id(self.bodies[owner]))
+            seen[id(self.bodies[owner])] = len(seen)
             self._body(owner, parts, seen)
 
     def _own(self, entry: Entry, owner: str) -> Hashable:
-        """Return what a term is by itself: kind, factor, numbers, bodies by name, its place in a mix, its address."""
-        times, values = (replaced(value, lambda v: self._varying(v, owner)) for value in (entry.times, entry.values))
+        """Return what a term is by itself: kind, factor, numbers, bodies by name, its place in a mix, its address.
+
+        What is used follows in the recipe, whatever it is called.
+        """
+        own = {k: v for k, v in entry.values.items() if k != "name"} if entry.kind == "use" else entry.values
+        times, values = (replaced(value, lambda v: self._varying(v, owner)) for value in (entry.times, Frozen(own)))
         stream = self._stream(owner)
         address = (self.spec.seed, stream, entry.label) if (stream, entry.label) in self.drawn else None
         counts = tuple([(name, len(body)) for name, body in entry.bodies.items()])
