@@ -98,6 +98,38 @@ def test_json_has_the_same(folder):
     assert json.loads(Result("difference", folder / "spec.yaml", folder / "spec.yaml", "--json").out)["equal"] is True
 
 
+def test_a_renamed_series_of_the_same_stream_is_said_to_be_renamed_and_moves_nothing(folder, tmp_path):
+    load = "load: {stream: load, of: [{constant: 80}, {ar: {phi: 0.8, sd: 3}}]}"
+    users = "\n  twice: [{use: load}, {use: load}]\n  price:"
+    plain = SPEC.replace("  price:", users[1:]).partition("variants")[0]
+    plain = plain.replace("load: [{constant: 80}, {ar: {phi: 0.8, sd: 3}}]", load)
+    (tmp_path / "a.yaml").write_text(plain)
+    (tmp_path / "b.yaml").write_text(plain.replace("load: {", "power: {").replace("use: load", "use: power"))
+    (tmp_path / "c.yaml").write_text((tmp_path / "b.yaml").read_text().replace("stream: load", "stream: power"))
+    a, b, c = (pg.render(tmp_path / f"{name}.yaml") for name in "abc")
+    assert np.array_equal(a["load"], b["power"]) and not np.array_equal(a["load"], c["power"])
+    for pair in ((a, b), (tmp_path / "a.yaml", tmp_path / "b.yaml")):
+        found = pg.difference(*pair)
+        assert [(one.name, one.state, one.was) for one in found.series] == [
+            ("power", "renamed", "load"), ("twice", "equal", ""), ("price", "equal", ""),
+        ]  # fmt: skip
+        assert "Series: 1 renamed, all others equal" in found.text() and not found.equal
+        assert "  renamed: load → power (same draws)" in found.text()
+    assert {one.state for one in pg.difference(a, c).series} == {"new", "gone", "differs", "equal"}
+
+
+def test_a_change_of_a_parameter_is_told_once(tmp_path):
+    text = SPEC.replace("series:", "parameters:\n  k: {draw: {uniform: [0.3, 0.9]}, over: path}\nseries:", 1)
+    text = text.replace("phi: 0.8", "phi: {parameter: k}")
+    text = text.replace("series.load.ar.sd: 5", "parameters.k.draw.uniform: [0.4, 0.5]")
+    (tmp_path / "spec.yaml").write_text(text)
+    spec = pg.load(tmp_path / "spec.yaml")
+    found = pg.difference(spec, spec.variant("crisis"))
+    assert [one.place for one in found.meaning] == ["parameters.k"] and found.series[0].state == "differs"
+    moved = {"series.load.ar.phi": 0.5, "series.price.random_walk.sd": {"parameter": "k"}}
+    assert [one.place for one in pg.difference(spec, spec.set(moved)).meaning] == [*moved]
+
+
 def test_two_specs_are_compared_without_drawing(folder, monkeypatch):
     monkeypatch.setattr("procgen.ensemble.draw.Drawer.fill", None)
     result = Result("difference", folder / "spec.yaml", "--variant", "crisis")

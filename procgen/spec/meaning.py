@@ -14,6 +14,7 @@ from typing import Any
 from procgen.spec.entries import children, named, walk
 from procgen.spec.model import Entry, Series, Shared, Spec
 from procgen.spec.places import plain_at
+from procgen.spec.varying import Varying, replaced
 
 LONGEST = 80
 Owner = Series | Shared
@@ -171,10 +172,20 @@ def _labelled(owner: Owner) -> dict[str, tuple[Entry, str]]:
 
 def _facts(place: str, spec: Spec, entry: Entry, parent: str) -> Facts:
     facts = {place: _Fact((entry.kind, parent), f"{entry.kind} in {parent}" if parent else entry.kind)}
-    facts[f"{place}.times"] = _Fact(entry.times, _at(spec, entry, "times", entry.times))
+    facts[f"{place}.times"] = _Fact(_named(entry.times, spec), _at(spec, entry, "times", entry.times))
     for name, value in entry.values.items():
-        facts[f"{place}.{name}"] = _Fact(value, _at(spec, entry, name, value))
+        facts[f"{place}.{name}"] = _Fact(_named(value, spec), _at(spec, entry, name, value))
     return facts
+
+
+def _named(value: Any, spec: Spec) -> Any:
+    """Return a value with the parameters in it by name: their draws are told once, where they are declared."""
+
+    def by_name(varying: Varying) -> Any:
+        name, scale = varying.name, varying.scale
+        return (name, scale) if name in spec.parameters else varying
+
+    return replaced(value, by_name)
 
 
 def _at(spec: Spec, entry: Entry, name: str, value: Any) -> str:
