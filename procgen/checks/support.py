@@ -26,6 +26,7 @@ from procgen.terms.window import Hold
 POSSIBLE, HELD = "possible values", "held values"
 _NEAR = {"float32": 2.0**-23}  # of a value's size: what is as near to a possible value is that value
 _DOUBLE = 1e-9
+_TINY = 1e-6  # a mean from which some e-folds lead below the least number that is stored
 
 Found = list[Any]  # how many, then path, step and value of the first, and of what is held the value before: for JSON
 
@@ -99,7 +100,7 @@ def checks(series: str, possible: Possible, outside: Found | None, moved: Found 
                 f"{count:,} value{'s' if count > 1 else ''} that the process cannot give, the first at path {path}, "
                 f"step {step}: {number(value, 10)}, where values are {allowed}"
             )
-        yield Check.fact(series, POSSIBLE, "all steps", fault, f"every value is {allowed}")
+        yield Check.fact(series, POSSIBLE, "all steps", fault, f"all values are {allowed}")
     if possible.every > 1:
         allowed, fault = f"held for {possible.every} steps from step {possible.first % possible.every} on", ""
         if moved is not None:
@@ -108,7 +109,7 @@ def checks(series: str, possible: Possible, outside: Found | None, moved: Found 
                 f"{count:,} value{'s differ' if count > 1 else ' differs'} from the one before, the first at path "
                 f"{path}, step {step}: {number(value, 10)}, where values are {allowed}"
             )
-        yield Check.fact(series, HELD, "all steps", fault, f"every value is {allowed}")
+        yield Check.fact(series, HELD, "all steps", fault, f"all values are {allowed}")
 
 
 def words(support: Support) -> str:
@@ -133,14 +134,21 @@ def words(support: Support) -> str:
 # what the graph says
 
 
-def possible_of(graph: Any, name: str, declared: Any) -> Possible:
-    """What a series of a graph can give, as its declaration stores it."""
+def possible_of(graph: Any, name: str, declared: Any, vanishes: bool = False) -> Possible:
+    """What a series of a graph can give, as its declaration stores it; 0, too, where what is above it `vanishes`."""
     closeness = _NEAR.get(declared.type, _DOUBLE)
     support = stored(_common(graph, name), declared)
+    support = replace(support, above=support.above and not vanishes)
     every, first = held(graph.series[name]) or (1, 0)
     if graph.varied is not None and graph.varied.parameters:
         every, first = 1, 0
     return Possible(support, closeness, every, first)
+
+
+def vanishes(theory: Any, steps: int) -> bool:
+    """Whether a series comes so near to 0 that a number above it may be stored as 0."""
+    mean = theory.mean(np.array([0, steps - 1]))
+    return mean is not None and float(np.min(np.abs(mean))) < _TINY
 
 
 def _common(graph: Any, name: str) -> Support:

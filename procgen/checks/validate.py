@@ -26,7 +26,7 @@ from procgen.checks.relations import plan_relations
 from procgen.checks.special import lumpy
 from procgen.checks.squares import plan_squares
 from procgen.checks.structure import Precision
-from procgen.checks.support import Possible, possible_of
+from procgen.checks.support import Possible, possible_of, vanishes
 from procgen.checks.tied import tied_checks
 from procgen.checks.verdict import Check, Verdict
 from procgen.ensemble.plan import Block
@@ -140,7 +140,7 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
         routes[name] = way
         random = th[name].random
         reach = Reach(th[name], grain) if random else None
-        possible = possible_of(graph, name, declared) if random else Possible()
+        possible = possible_of(graph, name, declared, vanishes(th[name], steps)) if random else Possible()
         precision.append(
             Precision(name, declared.type, declared.decimals, random, lumpy(th[name]), reach, possible=possible)
         )

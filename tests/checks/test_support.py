@@ -118,7 +118,7 @@ HOLD = [{"constant": 3}, {"hold": {"of": [{"white_noise": {"sd": 3}}], "every": 
 def test_what_is_held_must_not_move():
     values = draw(spec_of(HOLD, 60, 100, 4))
     (right,) = facts(verdict(HOLD, values), HELD)
-    assert right.outcome == "agrees" and right.note == "every value is held for 8 steps from step 2 on"
+    assert right.outcome == "agrees" and right.note == "all values are held for 8 steps from step 2 on"
     values["x"][7, 61] += 0.01
     (wrong,) = facts(verdict(HOLD, values), HELD)
     assert "2 values differ from the one before, the first at path 7, step 61" in wrong.note
@@ -206,3 +206,21 @@ def test_words():
 def test_what_is_not_finite_is_left_to_others():
     x = np.array([[np.nan, np.inf, 1.0]])
     assert Possible(BINARY).outside(x) is None and Possible(COUNTS).outside(x) is None
+
+
+def test_what_fades_away_may_be_stored_as_nothing():
+    body = [{"exp": [{"random_walk": {"sd": 1, "drift": -2}}]}]
+    spec = spec_of({"series": {"x": {"of": body, "type": "float32"}}}, 20, 80, 4)
+    x = draw(spec)["x"].astype(float)
+    (what,) = plan_of(spec).precision
+    assert (x == 0.0).any() and what.possible.outside(x.T) is None
+    assert what.possible.outside(np.array([[-1e-40]])) is not None
+
+
+def test_revealed_terms_are_looked_at_too(tmp_path):
+    regimes = {"branches": {"a": [{"white_noise": {"sd": 1}}], "b": [{"constant": 3}]}, "durations": {"a": 9, "b": 4}}
+    spec = spec_of([{"regimes": regimes, "as": "r"}, {"poisson": {"mean": 3}, "as": "p"}], 30, 60, 3)
+    ensemble = pg.render(spec, out=tmp_path / "e", reveal=["x.r.regime", "x.p"])
+    found = {check.series: (check.outcome, check.note) for check in facts(pg.validate(ensemble))}
+    assert found["x.r.regime"] == ("agrees", "all values are 0 or 1")
+    assert found["x.p"] == ("agrees", "all values are whole numbers from 0")
