@@ -110,6 +110,13 @@ class _Writer:
 
     def hint(self, tree: Tree, place: str, otherwise: str) -> str:
         """Return what may have been meant by a place that is not there."""
+        steps = steps_of(place)
+        groups = tree.value.get("groups") if tree.is_map else None
+        if steps[0] == "series" and len(steps) > 1 and groups is not None and groups.is_map:
+            name = next((name for name, group in groups.value.items() if _has_member(group, steps[1])), None)
+            if name is not None:
+                instead = _joined("groups", (name, *steps[2:]))
+                return f"{steps[1]} is one of the group {name}, whose series are written once; set {instead} for all"
         for section in (*_BODIES, "time"):
             other = _Writer(self.new, self.declared)
             try:
@@ -316,6 +323,20 @@ def _named_bodies(domain: Any) -> bool:
 def _with(tree: Tree, name: str, made: Tree) -> Tree:
     key = tree.keys.get(name, Tree(name, made.place))
     return Tree({**tree.value, name: made}, tree.place, {**tree.keys, name: key})
+
+
+def _has_member(group: Tree, name: Step) -> bool:
+    """Whether a group, as written, has a series of this name: in its list, by prefix and number, or in its table."""
+    if not group.is_map:
+        return False
+    names, table = (group.value[key] if key in group.value else None for key in ("names", "table"))
+    if table is not None and table.is_map and name in table.value:
+        return True
+    if names is None or not names.is_map:
+        return names is not None and names.is_list and any(each.value == name for each in names.value)
+    prefix, count = (names.value[key].value if key in names.value else None for key in ("prefix", "count"))
+    number = str(name).removeprefix(str(prefix))
+    return f"{prefix}{number}" == name and number.isdecimal() and isinstance(count, int) and 1 <= int(number) <= count
 
 
 def _names(parameters: Iterable[Parameter]) -> tuple[str, ...]:

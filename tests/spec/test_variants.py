@@ -343,3 +343,22 @@ def test_whatever_is_set_it_is_a_spec_or_a_spec_error(data):
         assert isinstance(spec.set({mangled: data.draw(WILD)}), pg.Spec)
     except pg.SpecError as error:
         assert str(error)
+
+
+@pytest.mark.parametrize(
+    "members",
+    [{"names": ["s1", "s2"]}, {"names": {"prefix": "s", "count": 2}}, {"table": {"s1": {"a": 1}, "s2": {"a": 2}}}],
+)
+def test_a_series_of_a_group_is_set_for_all_of_it(members):
+    import procgen as pg
+
+    body = {"of": [{"ar": {"phi": 0.5, "sd": 1}}]}
+    spec = pg.load({"seed": 1, "paths": 1, "time": {"steps": 3}, "groups": {"shops": {**members, **body}}})
+    with pytest.raises(pg.SpecError) as error:
+        spec.set({"series.s2.ar.sd": 2})
+    said = "s2 is one of the group shops, whose series are written once; set groups.shops.ar.sd for all"
+    assert said in str(error.value)
+    assert spec.set({"groups.shops.ar.sd": 2}).series["s2"].of[0].values["sd"] == 2
+    with pytest.raises(pg.SpecError) as error:
+        spec.set({"series.s3.ar.sd": 2})
+    assert "one of the group" not in str(error.value)
