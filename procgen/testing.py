@@ -49,7 +49,8 @@ def ensemble_fixture(
 
     Parameters
     ----------
-    spec : what `procgen.load` takes; a file that is not absolute is looked for from pytest's rootdir on.
+    spec : what `procgen.load` takes; a file that is not absolute is looked for beside the
+        test file, and then from pytest's rootdir on.
     expect : the digest that the ensemble should have, 64 hex digits. When it has another, tests that ask for it fail
         with the digest of today, and what moved where the old ensemble is still in the cache. None: nothing is held
         against it, and a warning says which digest to write.
@@ -128,7 +129,7 @@ class Asked:
 
         given = self.spec
         if isinstance(given, str | Path):
-            given = root / given
+            given = self._file(Path(given), root)
         spec = pg.load(given)
         spec = spec if self.variant is None else spec.variant(self.variant)
         spec = spec.changed(**self.changes)
@@ -138,6 +139,17 @@ class Asked:
                 return pg.render(spec, folder, first_path=self.first_path, reveal=self.reveal, resume=True)
             except InUse:  # by another worker: its lock ends with it, however it ends
                 continue
+
+    def _file(self, given: Path, root: Path) -> Path:
+        """The file of the spec: looked for beside the test file, and then from pytest's rootdir on."""
+        from procgen.spec.model import Fault, Place, SpecError
+
+        folders = list(dict.fromkeys([Path(self.written[0]).absolute().parent, root]))
+        found = next((folder / given for folder in folders if (folder / given).exists()), None)
+        if found is None:
+            tried = " or ".join([str(folder / given) for folder in folders]) if not given.is_absolute() else str(given)
+            raise SpecError((Fault(Place(None, 0, 0, ""), f"there is no file {tried}; check the path of the spec"),))
+        return found
 
     def _name(self, spec: Spec) -> str:
         """The name of a folder for whatever is drawn alike: by this spec, and by code that draws the same first path.

@@ -54,12 +54,13 @@ class Project:
         assert old in SPEC
         (self.folder / "dairy.yaml").write_text(SPEC.replace(old, new))
 
-    def run(self, *options: str, passed: int = 0, errors: int = 0) -> str:
+    def run(self, *options: str, passed: int = 0, errors: int = 0, failed: int = 0) -> str:
         """What pytest prints; it is an error when it counts other outcomes than these."""
         command = [sys.executable, "-m", "pytest", "-q", *options]
         done = subprocess.run(command, cwd=self.folder, capture_output=True, text=True, timeout=300)
         counted = {what: int(n) for n, what in re.findall(r"(\d+) (passed|error|failed)", done.stdout.splitlines()[-1])}
-        assert counted == {k: n for k, n in (("passed", passed), ("error", errors)) if n}, done.stdout + done.stderr
+        wanted = {"passed": passed, "error": errors, "failed": failed}
+        assert counted == {k: n for k, n in wanted.items() if n}, done.stdout + done.stderr
         return done.stdout
 
     @property
@@ -235,3 +236,16 @@ def test_pytest_is_needed_by_the_call_alone(tmp_path):
     )
     done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
     assert done.stdout == "procgen.testing makes fixtures of pytest; pip install pytest\n"
+
+
+def test_a_spec_is_looked_for_beside_the_test_file_first(project):
+    inner = project.folder / "inner"
+    inner.mkdir()
+    (project.folder / "test_dairy.py").rename(inner / "test_dairy.py")
+    project.run(passed=2)  # from rootdir
+    (inner / "dairy.yaml").write_text(SPEC.replace("paths: 6", "paths: 7"))
+    assert "assert (7, 30) == (6, 30)" in project.run("inner", passed=1, failed=1)
+    for file in (project.folder, inner):
+        (file / "dairy.yaml").unlink()
+    said = project.run(errors=2)
+    assert f"there is no file {inner / 'dairy.yaml'} or {project.folder / 'dairy.yaml'}; check the path" in said

@@ -112,5 +112,7 @@ def test_another_start_finds_the_rows_of_its_own_times(tmp_path):
     spec = pg.load(spec_file(tmp_path, {"file": "w.csv", "column": "degrees", "time": "at"}, time))
     assert pg.render(spec)["x"][0].tolist() == [2, 3, 4, 5]
     assert pg.render(spec.set({"time.start": "2027-03-05"}))["x"][0].tolist() == [5, 6, 7, 8]
-    with pytest.raises(pg.SpecError, match="the table has nothing for step 0"):
+    with pytest.raises(pg.SpecError, match=r"2027-03-01 \(line 2\) lies more than 9 steps before step 0; take"):
         spec.set({"time.start": "2027-04-05"})
+    with pytest.raises(pg.SpecError, match="the table has nothing for step 0"):
+        spec.set({"time.start": "2025-04-05"})
