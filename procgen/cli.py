@@ -237,7 +237,7 @@ def validate(
 @guarded
 def picture(
     source: Annotated[
-        Path, typer.Argument(metavar="SPEC|OUT", help="A spec, or a rendered ensemble.", show_default=False)
+        str, typer.Argument(metavar="SPEC|OUT", help="A spec, or a rendered ensemble.", show_default=False)
     ],
     out: Annotated[
         Path,
@@ -257,13 +257,14 @@ def picture(
 
     A page needs nothing but a browser; that of an ensemble has its verdict too.
     """
+    from procgen.ensemble.places import place_of
     from procgen.report.pictures.draw import picture as draw
 
     other = variant is not None or setting or start is not None
-    if other and source.is_dir():
+    if other and place_of(source).is_dir():
         raise typer.BadParameter("an ensemble is drawn as it is; give a spec with --variant, --set and --start")
     with progress("reading") as tick:
-        printed(f"picture: {draw(one_asked(source, variant, setting, start) if other else source, out, tick)}")
+        printed(f"picture: {draw(one_asked(Path(source), variant, setting, start) if other else source, out, tick)}")
 
 
 @app.command(

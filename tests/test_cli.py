@@ -461,3 +461,13 @@ def test_a_bar_on_a_terminal():
     os.close(outer)
     text = shown.decode()
     assert "drawing" in text and "of 10,000,000 rows" in text and "a second" in text and "%" in text
+
+
+@pytest.mark.parametrize("text", ["ftp:/host/x", "s3:/bucket/run"])
+def test_a_url_with_one_slash_is_no_folder(text, tmp_path, monkeypatch, rendered):
+    monkeypatch.chdir(tmp_path)
+    said = refused(Result("render", PUMP, "-o", text, *SMALL))
+    assert "with one slash; write two" in said and f"./{text}" in said
+    assert "with one slash; write two" in refused(Result("picture", text, "-o", "x.html"))
+    assert "on this machine, where exports are written" in refused(Result("export", str(rendered), "-o", f"{text}.csv"))
+    assert list(tmp_path.iterdir()) == [rendered]

@@ -8,6 +8,7 @@ stores do in one step. Which stores there are is Arrow's to say (s3, gs, abfs, h
 from __future__ import annotations
 
 import os
+import re
 from collections.abc import Iterator
 from pathlib import Path, PurePosixPath
 from types import SimpleNamespace
@@ -19,6 +20,7 @@ if TYPE_CHECKING:
     import pyarrow.fs as fs
 
 CHUNK = 8 << 20  # bytes of an upload at a time
+ONE_SLASH = re.compile(r"([A-Za-z][A-Za-z0-9+.-]+):/")  # a drive has one letter
 RETRY = {"gs": "retry_limit_seconds=20"}  # where a store that does not answer would be asked for many minutes
 
 
@@ -127,6 +129,11 @@ def place_of(value: str | os.PathLike[str]) -> Place:
     """The place that a path or a URL names; EnsembleError for a URL whose store cannot be opened."""
     text = os.fspath(value)
     if not is_url(text):
+        if lost := ONE_SLASH.match(text):
+            raise EnsembleError(
+                f"expected a path, or a URL such as {lost[1]}://bucket/name, got {text} with one slash; write two (a "
+                f"pathlib.Path drops one: give a text), or ./{text} for a folder of this machine"
+            )
         return Path(text)
     import pyarrow as pa
     from pyarrow.fs import FileSystem

@@ -20,7 +20,7 @@ from typing import Any
 import numpy as np
 
 from procgen.ensemble.errors import EnsembleError, InUse, system_sentence
-from procgen.ensemble.places import Place, Remote, place_of, readable
+from procgen.ensemble.places import ONE_SLASH, Place, Remote, is_url, place_of, readable
 
 MANIFEST = "manifest.json"
 PLAN = ".state/plan.json"
@@ -45,6 +45,8 @@ def named_path(value: Any) -> Path:
         raise TypeError(f"expected path to be the path of a file, got {type(value).__name__}")
     if not os.fspath(value):
         raise EnsembleError("expected path to be the path of a file, got an empty text; give one, such as values.csv")
+    if is_url(os.fspath(value)) or ONE_SLASH.match(os.fspath(value)):
+        raise EnsembleError(f"expected the path of a file on this machine, where exports are written, got {value}")
     return Path(value)
 
 

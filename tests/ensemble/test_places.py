@@ -153,3 +153,27 @@ def test_urls_that_lead_nowhere():
     with pytest.raises(EnsembleError, match=r"^nothing://at/all cannot be opened: "):
         pg.open_ensemble("nothing://at/all")
     assert places.place_of("file:///tmp/x") == places.Path("/tmp/x")
+
+
+def test_commands_read_an_ensemble_from_a_store_and_say_where_there_is_none(bucket, tmp_path):
+    from typer.testing import CliRunner
+
+    from procgen.cli import app
+
+    raw = {"seed": 3, "paths": 40, "time": {"steps": 20}, "series": {"x": [{"ar": {"phi": 0.5, "sd": 1}}]}}
+    url, none = bucket("runs/drawn"), bucket("runs/none")
+    pg.render(raw, url)
+
+    def said(*args):
+        found = CliRunner().invoke(app, list(args), catch_exceptions=False)
+        return found.exit_code, found.stdout + found.stderr
+
+    for name in ("x.html", "x.svg"):
+        code, text = said("picture", url, "-o", str(tmp_path / name))
+        assert code == 0 and (tmp_path / name).stat().st_size > 1000, text
+    plain = none.partition("?")[0]
+    for args in (("picture", none, "-o", str(tmp_path / "y.html")), ("difference", url, none)):
+        code, text = said(*args)
+        assert code == 2 and f"there is no ensemble at {plain}; give the URL of one" in text
+    code, text = said("export", url, "-o", bucket("runs/x.csv"))
+    assert code == 2 and "on this machine, where exports are written" in text

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable
 from pathlib import Path
 
+from procgen.ensemble.places import Place, Remote, place_of
 from procgen.report.pictures import gallery as galleries
 from procgen.report.pictures.gallery import Gallery
 from procgen.report.pictures.write import PictureError, place_for, sort_of, write
@@ -14,8 +15,8 @@ TABLES = (".csv", ".tsv", ".parquet", ".pq", ".gz")
 Tick = Callable[[int, int], None]
 
 
-def picture(source: Path | Spec, file: Path, progress: Tick | None = None) -> Path:
-    """Draw a spec (a YAML file, or read already) or an ensemble (the folder of a render) into `file`; returns its path.
+def picture(source: str | Path | Spec, file: Path, progress: Tick | None = None) -> Path:
+    """Draw a spec (a YAML file, or read already) or an ensemble (the place of a render) into `file`; returns its path.
 
     The suffix says what it becomes. A page of an ensemble has its verdict too, for which all of it is read; SVG and
     PNG show pictures only. What was in `file` is replaced.
@@ -25,6 +26,12 @@ def picture(source: Path | Spec, file: Path, progress: Tick | None = None) -> Pa
     sort = sort_of(place_for(file))
     if isinstance(source, Spec):
         return _drawn(source, file, sort, progress)
+    place = place_of(source)
+    if isinstance(place, Remote):
+        if not place.is_dir():
+            raise PictureError(f"there is no ensemble at {place}; give the URL of one, or a spec on this machine")
+        return _drawn(place, file, sort, progress)
+    source = place
     if not source.exists():
         raise PictureError(f"there is no file or folder {source}; give a spec, or the folder of a render")
     if source.suffix.lower() in TABLES and source.is_file():
@@ -35,7 +42,7 @@ def picture(source: Path | Spec, file: Path, progress: Tick | None = None) -> Pa
     return _drawn(source, file, sort, progress)
 
 
-def _drawn(source: Path | Spec, file: Path, sort: str, progress: Tick | None) -> Path:
+def _drawn(source: Place | Spec, file: Path, sort: str, progress: Tick | None) -> Path:
     if sort == "html":
         return write(file, _page(source, progress))
     shown = _gallery(source)
@@ -49,7 +56,7 @@ def _drawn(source: Path | Spec, file: Path, sort: str, progress: Tick | None) ->
     return write(file, png(shown.title, lines, shown.groups))
 
 
-def _gallery(source: Path | Spec) -> Gallery:
+def _gallery(source: Place | Spec) -> Gallery:
     if not isinstance(source, Spec) and source.is_dir():
         from procgen.ensemble import open_ensemble
 
@@ -57,17 +64,17 @@ def _gallery(source: Path | Spec) -> Gallery:
     return galleries.of_spec_alone(_spec(source))
 
 
-def _page(source: Path | Spec, progress: Tick | None) -> str:
+def _page(source: Place | Spec, progress: Tick | None) -> str:
     from procgen.report.html import verdict_page, whole_page
 
     if isinstance(source, Spec) or not source.is_dir():
         return whole_page(galleries.of_spec_alone(_spec(source)))
     from procgen.checks.validate import validate
 
-    return verdict_page(validate(source, progress=progress))
+    return verdict_page(validate(source.url if isinstance(source, Remote) else source, progress=progress))
 
 
-def _spec(source: Path | Spec) -> Spec:
+def _spec(source: Place | Spec) -> Spec:
     from procgen.terms.given import spec_of
 
     return spec_of(source)
