@@ -60,6 +60,12 @@ class Seasonal(Known):
             yield "harmonics", "expected `harmonics` or a `profile`, exactly one of them; give one"
         if not values["period"] > 0:
             yield "period", f"expected a period above 0, got {number(values['period'])} steps"
+        elif values["period"] < 2:
+            yield (
+                "period",
+                f"expected a period of at least 2 steps, below which nothing of it is seen, got "
+                f"{number(values['period'])}; take a longer period, or a shorter step (time.every)",
+            )
         profile = values["profile"]
         if profile is not None and values["centre"] == "mean" and _total(profile) == 0:
             yield "profile", "expected a profile that does not sum to 0 for `centre: mean`; use `centre: sum`"

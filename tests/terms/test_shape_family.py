@@ -153,3 +153,16 @@ def test_a_logit_beyond_its_levels_is_no_number():
     graph = graph_of("  x: {logit: [{white_noise: {sd: 1}}]}")
     x = draw(graph, 0, 50, [20])["x"]
     assert np.isnan(x).any() and np.isfinite(x).any()
+
+
+def test_a_season_shorter_than_two_steps_is_refused():
+    import procgen as pg
+
+    def spec(period):
+        body = [{"seasonal": {"period": period, "harmonics": [{"amplitude": 3}]}}]
+        time = {"start": "2027-01-01", "every": "1d", "steps": 6}
+        return {"seed": 1, "paths": 1, "time": time, "series": {"x": body}}
+
+    with pytest.raises(pg.SpecError, match=r"expected a period of at least 2 steps, .* got 0.125; take a longer"):
+        pg.load(spec("3h"))
+    assert pg.render(pg.load(spec("2d")))["x"][0].tolist() == [3, -3, 3, -3, 3, -3]
