@@ -210,7 +210,7 @@ class Gather:
         found = [self.deviations, self.products, self.crossed, *(p for p in self.pooled if p is not None)]
         found += self.related
         found += [powers for e in self.errors.values() for powers in (e.powers, e.beside)]
-        return found + [each.powers for each in self.squares.values()]
+        return found + [powers for each in self.squares.values() for powers in each.all_powers()]
 
     def _arrays(self, kind: type) -> list[NDArray]:
         found: list[NDArray] = [self.moments.mean, self.moments.products]

@@ -19,6 +19,12 @@ def sample_of(powers: Powers, k: int) -> Sample:
     return Sample.from_powers(n, powers.sums[:, k].tolist()) if n else Sample(0, math.nan, 0.0, 0.0, 0.0)
 
 
+def few_paths(n: int, wanted: int) -> str:
+    """Why an estimate of n paths is not judged; that it is the same on all of them where these would be enough."""
+    why = f"only {n} paths of at least {wanted}" if n < wanted else f"it is the same on all {n} paths"
+    return f"{why}: reported, not judged"
+
+
 def limit(
     plan: SeriesPlan,
     what: str,
@@ -45,7 +51,7 @@ def limit(
         note = "it is the same on every path but for rounding: reported, not judged"
         return Check(plan.name, what, probe, kind, theory, theory + sample.mean, outcome="reported", note=note)
     if sample.n < FEW_PATHS or sample.sd == 0.0:
-        note = f"only {sample.n} paths: reported, not judged"
+        note = few_paths(sample.n, FEW_PATHS)
         return Check(plan.name, what, probe, kind, theory, theory + sample.mean, outcome="reported", note=note)
     finding = judge.sample_mean(sample, theory, sd, hidden)
     if kind == "spread":

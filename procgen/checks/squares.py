@@ -17,6 +17,8 @@ from numpy.typing import NDArray
 
 from procgen.checks.blocks import Window, add_lagged, scratch
 from procgen.checks.judge import FEW_PATHS, Sample, sample_mean
+from procgen.checks.limits import few_paths
+from procgen.checks.log_sizes import LogLane, LogSizes, LogSums, plan_log_sizes
 from procgen.checks.sums import Powers
 from procgen.checks.verdict import Check
 
@@ -42,9 +44,10 @@ class Squares:
     slopes: tuple[float, ...]  # by lag
     highest: float  # order below which moments exist
     steps: int
+    logs: LogSizes | None = None  # a sharper look, where theory knows what it shows
 
 
-def plan_squares(theory: Any, steps: int) -> Squares | None:
+def plan_squares(theory: Any, steps: int, grain: float = 0.0) -> Squares | None:
     """The squares of a series with the same covariances at all steps, where they are known; else None."""
     highest = float(theory.highest_moment or 0.0)
     if theory.gaussian or theory.discrete or steps < 8 or not highest > _ORDER:
@@ -57,17 +60,19 @@ def plan_squares(theory: Any, steps: int) -> Squares | None:
     if variance is None or squares is None or not np.isfinite(squares).all() or not squares[0] > 0:
         return None
     slopes = tuple(float(each / squares[0]) for each in squares[1:])
-    return Squares(theory, float(variance[0]), float(squares[0]), lags, slopes, highest, steps)
+    logs = plan_log_sizes(theory, float(variance[0]), lags, grain)
+    return Squares(theory, float(variance[0]), float(squares[0]), lags, slopes, highest, steps, logs)
 
 
 class SquareLane:
     """What is carried for one range of paths: sums by path of q² and of its products, and the last rows."""
 
-    def __init__(self, lags: tuple[int, ...], paths: int):
+    def __init__(self, lags: tuple[int, ...], paths: int, logs: bool = False):
         self.sums = np.zeros((1 + len(lags), paths))
         self.unknown = np.zeros(paths, dtype=bool)
         self.rows = Window(max(lags), paths)
         self.steps = 0
+        self.logs = LogLane(lags, paths) if logs else None
 
 
 class SquareSums:
@@ -76,14 +81,17 @@ class SquareSums:
     def __init__(self, plan: Squares):
         self.plan = plan
         self.powers = Powers(len(plan.lags))
+        self.logs = LogSums(plan.logs) if plan.logs else None
 
     def lane(self, paths: int) -> SquareLane:
-        return SquareLane(self.plan.lags, paths)
+        return SquareLane(self.plan.lags, paths, self.logs is not None)
 
     def absorb(self, x: NDArray, first_step: int, lane: SquareLane) -> None:
         """Add a tile (steps, paths) of values."""
         mean = np.asarray(self.plan.theory.mean(np.arange(first_step, first_step + len(x))))
         q = np.subtract(x, mean[:, None], out=scratch(len(x), x.shape[1], 1))
+        if self.logs is not None and lane.logs is not None:
+            self.logs.absorb(q, lane.logs)
         np.multiply(q, q, out=q)
         q -= self.plan.variance
         lane.unknown |= ~np.isfinite(q).all(axis=0)
@@ -104,14 +112,23 @@ class SquareSums:
             for total, lag, slope in zip(sums[1:], self.plan.lags, self.plan.slopes, strict=True)
         ]
         self.powers.absorb(np.array(averages).T / self.plan.spread)
+        if self.logs is not None and lane.logs is not None:
+            self.logs.finish(lane.logs)
 
     def merge(self, other: SquareSums) -> None:
-        self.powers.merge(other.powers)
+        for mine, theirs in zip(self.all_powers(), other.all_powers(), strict=True):
+            mine.merge(theirs)
+
+    def all_powers(self) -> list[Powers]:
+        """Everything that is summed."""
+        return [self.powers, *([self.logs.powers] if self.logs else [])]
 
     def checks(self, series: str) -> Iterator[Check]:
         """The slope of the squares at each lag."""
         for k, lag in enumerate(self.plan.lags):
             yield self._check(series, k, f"lag {lag}")
+        if self.logs is not None:
+            yield from self.logs.checks(series)
 
     def _check(self, series: str, k: int, probe: str) -> Check:
         what, kind, theory, n = "slope of squares", "clustering", self.plan.slopes[k], int(self.powers.n[k])
@@ -120,6 +137,6 @@ class SquareSums:
             note = f"moments exist only below order {self.plan.highest:g}: no central limit theorem reaches far enough"
             return Check(series, what, probe, kind, theory, theory + sample.mean, outcome="untestable", note=note)
         if n < _FEW or sample.sd == 0.0:
-            note = f"only {n} paths: reported, not judged"
+            note = few_paths(n, _FEW)
             return Check(series, what, probe, kind, theory, theory + sample.mean, outcome="reported", note=note)
         return Check.of(series, what, probe, kind, sample_mean(sample, theory, times=hidden(self.plan.steps)))

@@ -148,9 +148,10 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
     ways = [way for way in routes.values() if isinstance(way, Route) and way.scores is not None]
     pairs = {(a.series, b.series): expected(a, b, th.axis.space) for a, b in list(combinations(ways, 2))[:PAIR_LIMIT]}
     unseen = [name for name, way in routes.items() if isinstance(way, Cannot) or way.scores is None]
-    squares = {name: found for name in unseen if (found := plan_squares(th[name], steps)) is not None}
+    grains = {plan.name: plan.grain for plan in series}
+    squares = {name: found for name in unseen if (found := plan_squares(th[name], steps, grains[name])) is not None}
     whole = Plan(steps, series, precision, plan_cross(series, th.cross), routes, pairs, squares, gaps)
-    whole.relations = plan_relations(graph, th, steps, {plan.name: plan.grain for plan in series})
+    whole.relations = plan_relations(graph, th, steps, grains)
     return missing.adapted(whole, gaps) if gaps else whole
 
 
@@ -254,12 +255,12 @@ def _shocks(gather: Gather, name: str) -> Iterator[Check]:
         yield Check(name, "recovered shocks", "", "law", outcome="untestable", note=_none_recovered(way, gather))
         return
     yield from shock_checks(name, sums, way.words)
+    ranks = way.ranked is not None or way.few is not None
+    yield from farthest.checks(name, sums.scores, sums.far, sums.n, noise, ranks)
     if name in gather.events:
         yield from gather.events[name].checks(name)
 
 
-    ranks = way.ranked is not None or way.few is not None
-    yield from farthest.checks(name, sums.scores, sums.far, sums.n, noise, ranks)
 def _none_recovered(way: Route, gather: Gather) -> str:
     """Why a way that can be gone has led to no shock, and how many steps would mend it."""
     needed = way.needed(_LONGEST)

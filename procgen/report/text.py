@@ -3,12 +3,12 @@
 from __future__ import annotations
 
 import math
+import re
 from collections import Counter
 from collections.abc import Iterator, Sequence
 from typing import TYPE_CHECKING
 
 from procgen.checks import coverage
-from procgen.checks.judge import FEW_PATHS
 from procgen.checks.words import many, name_of, number, p_text, tally
 
 if TYPE_CHECKING:
@@ -19,6 +19,7 @@ CAUTION = (
     "not make the model right; they do not replace the rules that bind you or the judgement of a licensed professional."
 )
 _BAR = 12
+_WANTED = re.compile(r" paths of at least (\d+): reported")
 
 
 def table(head: Sequence[str], rows: Sequence[Sequence[str]], left: Sequence[int] = (0,)) -> list[str]:
@@ -72,8 +73,9 @@ def reported(verdict: Verdict) -> list[str]:
     notes = [row.note for row in verdict.rows if row.outcome == "reported"]
     if not notes:
         return []
-    few = any(" paths: reported" in note for note in notes)
-    why = f"fewer than {FEW_PATHS} paths are too few for these checks" if few else "the reasons stand below"
+    wanted = {int(found[1]) for note in notes if (found := _WANTED.search(note))}
+    few = f"fewer than {' or '.join(str(n) for n in sorted(wanted))} paths are too few for these checks"
+    why = few if wanted else "the reasons stand below"
     return [f"reported: shown, not judged; {why}"]
 
 

@@ -65,3 +65,21 @@ def test_what_spreads_ranks_over_their_chances_differs_from_seed_to_seed():
     assert isinstance(other, Route)
     u = [dither(0, 150, 0, 60, "x" + way.salt) for way in (one, other)]
     assert abs(np.corrcoef(u[0].ravel(), u[1].ravel())[0, 1]) < 5 / math.sqrt(9000)
+
+
+def test_a_check_that_is_not_judged_says_how_many_paths_it_asks_for():
+    from procgen.checks.limits import few_paths
+    from procgen.report.text import reported
+
+    def said(*notes):
+        rows = [Check("x", "some", "", "memory", outcome="reported", note=note) for note in notes]
+        return reported(Verdict(rows, 0.001))
+
+    assert said(few_paths(300, 500)) == [
+        "reported: shown, not judged; fewer than 500 paths are too few for these checks"
+    ]
+    assert said(few_paths(60, 500), few_paths(60, 100))[0].endswith(
+        "fewer than 100 or 500 paths are too few for these checks"
+    )
+    assert few_paths(300, 100) == "it is the same on all 300 paths: reported, not judged"
+    assert said(few_paths(300, 100)) == ["reported: shown, not judged; the reasons stand below"]
