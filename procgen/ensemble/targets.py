@@ -2,11 +2,14 @@
 
 from __future__ import annotations
 
+import contextlib
 import csv
 import io
+import zipfile
 from collections.abc import Iterator
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, ClassVar
+from xml.sax.saxutils import escape
 
 from procgen.ensemble.clock import Clock
 from procgen.ensemble.errors import EnsembleError
@@ -18,6 +21,7 @@ if TYPE_CHECKING:
 
 CHUNKS = 1 << 17  # pieces of columns in a Parquet file: each costs writer and reader about 2 kB of memory
 SHEET_ROWS, SHEET_COLUMNS = 1_048_576, 16_384  # Office Open XML (ECMA-376) leaves it open; these are in common use
+SHEET, CELL = "xl/worksheets/sheet1.xml", 128  # where a workbook has its first sheet; bytes of a cell, at most
 
 
 class Target:
@@ -76,38 +80,79 @@ class Csv(Target):
 
 
 class Sheet(Target):
-    """One sheet of an Office Open XML workbook, row by row; numbers in full, times without a zone."""
+    """One sheet of an Office Open XML workbook; numbers in full, times without a zone.
+
+    openpyxl makes the workbook with the names of the columns; the rows are put in as text of the sheet, since a cell
+    made as an object takes ten times as long. ECMA-376 part 1, 18.3.1: row, c (cell), v (value), is (text in place).
+    """
 
     AT_ONCE = 1 << 13
 
     def __init__(self, path: Path, rows: Form, clock: Clock | None):
-        from openpyxl import Workbook
-        from openpyxl.cell import WriteOnlyCell
+        from openpyxl.utils import get_column_letter
 
         super().__init__(path, rows, clock)
-        self._cell = WriteOnlyCell
-        self._book = Workbook(write_only=True)
-        self._sheet = self._book.create_sheet("values")
-        self._sheet.append([self._typed(name, "s") for name in rows.schema.names])
-
-    def _typed(self, text: str, kind: str) -> Any:
-        """A cell whose text is taken as it is: else numbers would be cut to 16 digits, and =x be a formula."""
-        cell = self._cell(self._sheet, value=text)
-        cell.data_type = kind
-        return cell
+        names = rows.schema.names
+        self._letters = [get_column_letter(k + 1) for k in range(len(names))]
+        self._row = 2
+        self._book, self._date = _empty_book(names)
+        before, end, after = self._book.read(SHEET).partition(b"</sheetData>")
+        self._rest = end + after
+        self._zip = zipfile.ZipFile(path, "w", zipfile.ZIP_DEFLATED, compresslevel=3)
+        large = (rows.total() + 1) * len(names) * CELL > zipfile.ZIP64_LIMIT
+        self._sheet = self._zip.open(SHEET, "w", force_zip64=large)
+        self._sheet.write(before)
 
     def write(self, block: Block, table: pa.Table) -> None:
         if self.time is not None and self.clock is not None:
             table = self.clock.replaced(table, self.time, block, self.clock.dates)
-        columns = [column.to_pylist() for column in table.columns]
-        for row in zip(*columns, strict=True):
-            self._sheet.append([self._typed(repr(v), "n") if isinstance(v, float) else v for v in row])
+        numbers = range(self._row, self._row + table.num_rows)
+        columns = [self._cells(*pair, numbers) for pair in zip(self._letters, table.columns, strict=True)]
+        rows = [
+            f'<row r="{number}">{"".join(cells)}</row>'
+            for number, cells in zip(numbers, zip(*columns, strict=True), strict=True)
+        ]
+        self._sheet.write("".join(rows).encode())
+        self._row = numbers.stop
+
+    def _cells(self, letter: str, column: pa.ChunkedArray, numbers: range) -> list[str]:
+        """The cells of a column; nothing for what is missing. repr of a number has all its digits."""
+        import pyarrow as pa
+
+        values = column.to_pylist()
+        texts: dict[Any, str] = {}
+        style = ""
+        if pa.types.is_integer(column.type) or pa.types.is_floating(column.type):
+            pairs = zip(numbers, values, strict=True)
+            return ["" if v is None else f'<c r="{letter}{n}" t="n"><v>{v!r}</v></c>' for n, v in pairs]
+        for value in dict.fromkeys(values):
+            texts[value], style = self._typed(value)
+        return [f'<c r="{letter}{n}"{style}>{texts[v]}</c>' for n, v in zip(numbers, values, strict=True)]
+
+    def _typed(self, value: Any) -> tuple[str, str]:
+        """What is in the cell of a text or of a time, and how it is marked."""
+        from openpyxl.utils.datetime import to_excel
+
+        if isinstance(value, str):
+            return f"<is><t>{escape(value)}</t></is>", ' t="inlineStr"'
+        return f"<v>{to_excel(value)!r}</v>", f' t="n" s="{self._date}"'
 
     def __exit__(self, kind: type[BaseException] | None, *rest: object) -> None:
-        if kind is None:
-            self._book.save(self.path)
-        else:
-            self._sheet.close()
+        try:
+            if kind is None:
+                self._finish()
+        finally:
+            for one in (self._sheet, self._zip):  # what could not be written cannot be ended either
+                with contextlib.suppress(OSError, ValueError):
+                    one.close()
+
+    def _finish(self) -> None:
+        self._sheet.write(self._rest)
+        self._sheet.close()
+        for name in self._book.namelist():
+            if name != SHEET:
+                self._zip.writestr(name, self._book.read(name))
+        self._zip.close()
 
     @classmethod
     def check(cls, path: Path, rows: Form, count: int) -> None:
@@ -172,6 +217,24 @@ class Parquet(Target):
         finally:
             self._file.is_open = False
             self._sink.close()
+
+
+def _empty_book(names: list[str]) -> tuple[zipfile.ZipFile, int]:
+    """A workbook in memory whose sheet has the names of columns only, and the number of its style for times."""
+    from datetime import datetime
+
+    from openpyxl import Workbook
+    from openpyxl.cell import WriteOnlyCell
+
+    book, made = Workbook(write_only=True), io.BytesIO()
+    sheet = book.create_sheet("values")
+    head = [WriteOnlyCell(sheet, value=name) for name in names]
+    for cell in head:
+        cell.data_type = "s"  # a name such as =x is no formula
+    sheet.append(head)
+    style = WriteOnlyCell(sheet, value=datetime(2000, 1, 1)).style_id
+    book.save(made)
+    return zipfile.ZipFile(made), style
 
 
 def _refuse_lists(path: Path, rows: Form) -> None:

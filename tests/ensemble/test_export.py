@@ -4,6 +4,8 @@ import builtins
 import os
 import subprocess
 import sys
+import zipfile
+from xml.etree import ElementTree
 
 import numpy as np
 import openpyxl
@@ -354,6 +356,34 @@ def test_a_file_that_is_there_is_replaced_only_when_asked(tmp_path, demand):
         demand.export(tmp_path, overwrite=True)
 
 
+def test_a_sheet_tells_its_rows_as_they_are_written(tmp_path):
+    made, told = fake_render(fake_spec(paths=50, steps=1000)), []
+    made.export(tmp_path / "x.xlsx", progress=lambda done, rows: told.append((done, rows)))
+    done = [first for first, _ in told]
+    assert len(done) >= 50_000 // 8192 and done == sorted(done) and told[-1] == (50_000, 50_000)
+    assert {rows for _, rows in told} == {50_000}
+
+
+def test_a_sheet_has_numbers_texts_and_times_in_their_cells_and_nothing_for_what_is_missing(tmp_path):
+    body = {"missing": {"of": [{"white_noise": {"sd": 1}}], "share": 0.5}}
+    counts = {"type": "int64", "of": [{"constant": 2**53 + 2}, {"poisson": {"mean": 4}}]}
+    time = {"steps": 40, "start": "2027-01-04T00:00", "every": "90min"}
+    made = pg.render({"seed": 3, "paths": 2, "time": time, "series": {"m": body, "n": counts}})
+    path = made.export(tmp_path / "x.xlsx")
+    rows = list(openpyxl.load_workbook(path)["values"].iter_rows(min_row=2, values_only=True))
+    found = pd.DataFrame(rows, columns=["path", "step", "time", "m", "n"])
+    gaps = np.isnan(made["m"].ravel())
+    assert 20 < gaps.sum() < 60 and [row[3] is None for row in rows] == gaps.tolist()
+    assert [row[4] for row in rows] == made["n"].ravel().tolist()  # whole numbers as such
+    assert np.array_equal(found["time"].to_numpy("datetime64[us]"), np.tile(made.times(), 2))
+    with zipfile.ZipFile(path) as book:
+        assert book.testzip() is None
+        sheet = ElementTree.fromstring(book.read("xl/worksheets/sheet1.xml"))
+    spaced = "{http://schemas.openxmlformats.org/spreadsheetml/2006/main}"  # ECMA-376 part 1, annex A
+    cells = [cell.get("r") for cell in sheet.iter(f"{spaced}c")]
+    assert cells[:6] == ["A1", "B1", "C1", "D1", "E1", "A2"] and len(set(cells)) == len(cells) == 405 - gaps.sum()
+
+
 def test_the_files_of_the_ensemble_itself_are_never_written_over(tmp_path, monkeypatch):
     made = pg.render(DEMAND, tmp_path / "out")
     part = made.manifest.parts[0].file
@@ -379,7 +409,7 @@ def test_a_stop_leaves_nothing_and_what_was_there_as_it_was(tmp_path, demand, su
     assert os.listdir(tmp_path) == [path.name] and path.read_text() == "mine"
 
 
-@pytest.mark.parametrize("suffix", [".csv", ".parquet", ".npy"])
+@pytest.mark.parametrize("suffix", [".csv", ".xlsx", ".parquet", ".npy"])
 def test_a_write_that_the_system_refuses_is_a_sentence(tmp_path, suffix):
     code = (
         "import resource, signal, sys\nfrom procgen.ensemble.errors import EnsembleError\n"
