@@ -11,7 +11,7 @@ import math
 from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING
 
-from procgen.checks.words import FARTHEST, FARTHEST_SHOCK, is_signed, sort_of
+from procgen.checks.words import FARTHEST, FARTHEST_SHOCK, is_signed, of_stays, sort_of
 
 if TYPE_CHECKING:
     from procgen.checks.verdict import Check
@@ -60,6 +60,10 @@ def _of_series(rows: Sequence[Check], sizes: Mapping[str, float]) -> Groups:
     for row in sorted(rows, key=lambda row: -_gain(row, sizes)):
         if row.outcome == "departs":
             kinds.setdefault(sort_of(row), []).append(row)
+    stays = [row for row in kinds.get("memory", ()) if of_stays(row)]
+    if stays:  # a series of states is judged by them: all else that is off about it follows
+        kinds["memory"] = stays + [row for row in kinds["memory"] if not of_stays(row)]
+        return [kinds[kind] for kind in sorted(kinds, key=lambda kind: (kind != FARTHEST, kind != "memory"))]
     follows = _following(rows, kinds)
     order = sorted(kinds, key=lambda kind: (kind != FARTHEST, kind in follows, -_gain(kinds[kind][0], sizes)))
     if order:
@@ -140,9 +144,16 @@ def _behind_spread(rows: Sequence[Check], kinds: Mapping[str, list[Check]]) -> s
 def _behind_memory(rows: Sequence[Check], kinds: Mapping[str, list[Check]]) -> str | None:
     """Spread, where the slope on earlier steps has changed only because more, or less, of the variance is noise."""
     variance, slope = _moved(rows, "variance over steps"), _moved(rows, "slope over steps")
-    if "spread" not in kinds or variance is None or slope is None:
+    if "spread" not in kinds or variance is None or slope is None or _turned(rows):
         return None
     return "spread" if abs(slope + variance) < _LIKE * abs(variance) else None
+
+
+def _turned(rows: Sequence[Check]) -> bool:
+    """Whether the steepest slope on earlier steps has the other sign: noise takes from a slope, but turns none."""
+    known = [(row.theory, row.estimate) for row in rows if row.what == "slope over steps" and row.theory]
+    theory, estimate = max(known, key=lambda pair: abs(pair[0]), default=(1.0, 1.0))
+    return estimate is not None and estimate / theory < -_LIKE
 
 
 _BEHIND = {"spread": _behind_spread, "memory": _behind_memory}

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import re
 from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING
 
@@ -47,6 +48,7 @@ _CORRELATIONS = {
 }  # how checks end whose estimate is a correlation as long as spreads are as stated -> what it is in any case
 _DRAWN = ": distribution function"  # how the check of a drawn parameter ends
 FARTHEST, FARTHEST_SHOCK = "farthest value", "shocks: farthest"
+_STAYS = re.compile(r"share: (.+) after \1, (up to \d+ steps|longer)")
 GAP = " of the gap"  # how the checks end of a combination of series that theory calls steady
 _LEAST_P = math.log(1e-300)  # below this a p is only said to be smaller
 
@@ -87,6 +89,11 @@ def sort_of(row: Check) -> str:
     if row.what in (FARTHEST, FARTHEST_SHOCK) and row.kind == "structure":
         return FARTHEST
     return name_of(row) if row.what.startswith("share: ") and row.kind == "level" else row.kind
+
+
+def of_stays(row: Check) -> bool:
+    """Whether a check is about how long the stays in a state are, whatever their mean."""
+    return _STAYS.fullmatch(row.what) is not None
 
 
 def is_signed(row: Check) -> bool:
@@ -133,6 +140,8 @@ def _says(top: Check) -> str:
     """The departure in general, with its direction where the check has one."""
     if sort_of(top) != top.kind:
         return f"{'smaller' if (top.estimate or 0.0) < (top.theory or 0.0) else 'larger'} than stated"
+    if of_stays(top):
+        return "lengths of stays are not as stated"
     way = "not the one"
     if is_signed(top) and top.kind in _MORE_LESS and top.estimate is not None and top.theory is not None:
         way = _MORE_LESS[top.kind][int(top.estimate < top.theory)]
