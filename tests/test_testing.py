@@ -192,7 +192,8 @@ def test_faults_of_a_spec_are_told_without_a_traceback(project):
     assert "dairy (test_dairy.py, line 3) cannot be drawn: expected all roots" in said
     assert "Traceback" not in said and "procgen/testing.py" not in said
     (project.folder / "dairy.yaml").unlink()
-    assert "cannot read the spec: No such file or directory" in project.run(errors=2)
+    said = project.run(errors=2)
+    assert f"there is no file {project.folder / 'dairy.yaml'}; check the path of the spec" in said
 
 
 def test_a_folder_that_another_holds_says_so_in_a_kind_of_its_own(tmp_path):
