@@ -125,8 +125,7 @@ class Redrawn(Ensemble):
         names: Sequence[str] | None = None,
         steps: range | None = None,
     ) -> Blocks:
-        first = self.whole.first_path if first_path is None else first_path
-        end = self.whole.end_path if end_path is None else end_path
+        first, end = self._range(first_path, end_path)
         drawer = Drawer(self._source)
         for batch in batches(Block(first, end - first, 0, self.whole.steps), row_bytes(self._source.columns)):
             values = empty(batch, self._source.columns)

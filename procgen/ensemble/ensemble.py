@@ -54,6 +54,11 @@ class Ensemble(Shapes):
 
     # what is here
 
+    def _range(self, first_path: int | None, end_path: int | None) -> tuple[int, int]:
+        """The paths from first to end, those that are here where None."""
+        first = self.whole.first_path if first_path is None else first_path
+        return first, self.whole.end_path if end_path is None else end_path
+
     @property
     def names(self) -> tuple[str, ...]:
         return tuple(column.name for column in self.columns)
@@ -220,8 +225,7 @@ class Memory(Ensemble):
         names: Sequence[str] | None = None,
         steps: range | None = None,
     ) -> Blocks:
-        first = self.whole.first_path if first_path is None else first_path
-        end = self.whole.end_path if end_path is None else end_path
+        first, end = self._range(first_path, end_path)
         wanted = Block(first, end - first, self.whole.first_step, self.whole.steps)
         for block in cut(wanted, GROUP_ROWS):
             yield block, {name: values[block.within(self.whole)] for name, values in self._values.items()}
@@ -263,8 +267,7 @@ class OnDisk(Ensemble):
         names: Sequence[str] | None = None,
         steps: range | None = None,
     ) -> Blocks:
-        first = self.whole.first_path if first_path is None else first_path
-        end = self.whole.end_path if end_path is None else end_path
+        first, end = self._range(first_path, end_path)
         stamps, layout = self.stamps, self.manifest.layout
         steps = range(self.whole.end_step) if steps is None else steps
         for part in self.manifest.parts:

@@ -75,9 +75,6 @@ class Remote:
         """Whether anything is below it: a store may list names alone."""
         return next(self.iterdir(), None) is not None
 
-    def is_symlink(self) -> bool:
-        return False
-
     def stat(self) -> Any:
         """`st_size` of a file; FileNotFoundError when it is not there."""
         info = self._type()

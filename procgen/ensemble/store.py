@@ -177,6 +177,7 @@ class Folder:
                         self.state.rmdir()
             return
         made = [folder for folder in (self.path, *self.path.parents) if not folder.exists()]
+        assert isinstance(self.state, Path)
         if self.state.is_symlink():
             raise EnsembleError(f"{self.state} is a link to another place; remove it, or choose another OUT")
         try:
