@@ -125,8 +125,9 @@ class GaussianNoise:
         if self.hurst == 0.5:
             return np.full(f.shape, self.variance)
         scale = self.variance * gamma(power) * math.sin(math.pi * self.hurst) * (2.0 * np.pi) ** -power
-        apart = np.where(f > 0.0, f, 0.5)
-        total = 4.0 * np.sin(np.pi * f) ** 2 * (zeta(power, apart) + zeta(power, 1.0 - f))
+        apart, height = np.where(f > 0.0, f, 0.5), 2.0 * np.sin(np.pi * f)
+        pole = (height / apart) ** 2 * apart ** (2.0 - power)  # j = 0 by itself: finite however near to 0
+        total = pole + height**2 * (zeta(power, 1.0 + f) + zeta(power, 1.0 - f))
         return np.where(f > 0.0, scale * total, 0.0)
 
     def weights(self, count: int) -> np.ndarray:

@@ -51,9 +51,9 @@ def test_the_same_process_seen_by_the_hour(name):
     assert len(set(np.diff(hours))) > 1
 
 
+@mpmath.workdps(30)
 def test_decay_over_a_weekend_in_digits():
     """exp(−κ·3/365.2425) from Friday to Monday, and the variance σ²/(2κ)(1 − φ²), in 30 digits."""
-    mpmath.mp.dps = 30
     graph = graph_of(f"  x: {{{OU}, before: {{x: 5}}}}}}")
     phi, ratio = graph.series["x"].term.core._paces(np.array([5]))  # step 5 is 12 January, after 8, 7 and 5 January
     stamps = graph.spec.time.stamps(4, 2)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from fractions import Fraction
 
 import mpmath
@@ -112,6 +113,14 @@ def test_a_long_memory_against_its_autocovariances(body):
         ends = [0, 0.5, 0.7, mpmath.mpf(0.5) ** 0.2]
         exact = pytest.approx(float(x.autocovariance([lag])[0]), abs=1e-11 * float(x.variance(0)))
         assert float(2 * mpmath.quad(share, ends, maxdegree=5)) == exact
+
+
+def test_a_pole_from_very_near():
+    """c |f|^(1-2H) (1 + O(f^2)) towards 0 (Beran 1994, eq. 2.15), down to the smallest frequencies there are."""
+    x = series_of({"fractional_gaussian_noise": {"hurst": 0.8, "sd": 2}})
+    f = np.array([1e-6, 1e-100, 1e-150, 1e-300])
+    c = 4 * math.gamma(2.6) * math.sin(0.8 * math.pi) * (2 * math.pi) ** -0.6
+    np.testing.assert_allclose(x.spectral_density(f), c * f**-0.6, rtol=1e-9)
 
 
 def test_the_long_run_variance_of_a_long_memory():
