@@ -1,7 +1,7 @@
 """Tables in files: CSV and Parquet read as DataFrames, and what is no such file is told in a sentence, with a repair.
 
 A CSV is looked through before it is read: a line with more fields than the header would be read with its values in
-wrong columns, or some of them dropped.
+wrong columns, or some of them dropped; one with fewer, with values missing that nobody left out.
 """
 
 from __future__ import annotations
@@ -94,7 +94,7 @@ def _text(path: Path, choose: Callable[[list[str]], N]) -> tuple[pd.DataFrame, N
         _refuse_other_files(path, file.read(_HEAD))
     separator, header = _header(path)
     wanted = choose([name or f"Unnamed: {k}" for k, name in enumerate(header)])
-    _refuse_long_lines(path, separator, len(header))
+    _refuse_other_lines(path, separator, len(header))
     return pd.read_csv(path, sep=separator, usecols=wanted.all, low_memory=False), wanted
 
 
@@ -132,42 +132,46 @@ def _header(path: Path) -> tuple[str, list[str]]:
     return best, rows[best]
 
 
-def _refuse_long_lines(path: Path, separator: str, expected: int) -> None:
-    """TableError for the first line with more fields than the header."""
+def _refuse_other_lines(path: Path, separator: str, expected: int) -> None:
+    """TableError for the first line with more fields than the header, or fewer; blank lines do not count."""
     number = 0
     with _opened(path) as file:
         while chunk := file.read(_CHUNK):
             chunk += file.readline()
             if b'"' in chunk or b"\r" in chunk.replace(b"\r\n", b""):  # a field may hold separators and ends of lines
                 break
-            found = _longer(chunk, separator, expected)
-            if found is not None:
+            for found in _other(chunk, separator, expected):
                 line = chunk.split(b"\n", found + 1)[found].decode(errors="replace").rstrip("\r")
-                raise _too_long(path, number + found + 1, line.split(separator), separator, expected)
+                if line.strip(" ") or separator in line:
+                    raise _wrong_line(path, number + found + 1, line.split(separator), separator, expected)
             number += chunk.count(b"\n")
         else:
             return
     with io.TextIOWrapper(_opened(path), encoding="utf-8-sig", newline="") as lines:  # type: ignore[arg-type]
         reader = csv.reader(lines, delimiter=separator)
         for row in reader:
-            if len(row) > expected:
-                raise _too_long(path, reader.line_num, row, separator, expected)
+            if len(row) != expected and (len(row) > 1 or any(map(str.strip, row))):
+                raise _wrong_line(path, reader.line_num, row, separator, expected)
 
 
-def _longer(chunk: bytes, separator: str, expected: int) -> int | None:
-    """The first line of a chunk of whole lines with more fields than expected."""
+def _other(chunk: bytes, separator: str, expected: int) -> list[int]:
+    """The lines of a chunk of whole lines, empty ones left out, that have other than the expected number of fields."""
     letters = np.frombuffer(chunk, dtype=np.uint8)
-    ends = np.flatnonzero(letters == ord("\n"))
-    cuts = np.searchsorted(np.flatnonzero(letters == ord(separator)), np.append(ends, len(letters)))
-    long = np.flatnonzero(np.diff(cuts, prepend=0) >= expected)
-    return int(long[0]) if long.size else None
+    ends = np.append(np.flatnonzero(letters == ord("\n")), len(letters))
+    cuts = np.searchsorted(np.flatnonzero(letters == ord(separator)), ends)
+    filled = np.diff(ends, prepend=-1) > 1
+    if b"\r" in chunk:
+        filled &= (np.diff(ends, prepend=-1) > 2) | (letters[np.maximum(ends - 1, 0)] != ord("\r"))
+    return np.flatnonzero(filled & (np.diff(cuts, prepend=0) != expected - 1)).tolist()
 
 
-def _too_long(path: Path, line: int, fields: list[str], separator: str, expected: int) -> TableError:
+def _wrong_line(path: Path, line: int, fields: list[str], separator: str, expected: int) -> TableError:
     shown = separator.join(fields)
     shown = repr(shown if len(shown) <= 60 else shown[:59] + "…")
     mend = "is there a separator too many, or a text with one that does not stand in quotes?"
-    if separator == ",":
+    if len(fields) < expected:
+        mend = "is it cut off? Of a value that is missing the field is empty, but its separator stands"
+    elif separator == ",":
         mend = "write numbers with a decimal point, not a comma, and put text that holds a comma in quotes"
     return TableError(
         f"{path}: expected {expected} fields between {_SEPARATORS[separator]} in line {line}, as the header has, got "

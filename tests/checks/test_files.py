@@ -90,6 +90,35 @@ def test_a_line_with_more_fields_than_the_header_is_refused(tmp_path, monkeypatc
     assert f"expected 4 fields between commas {said}; write numbers with a decimal point, not a comma" in text
 
 
+@pytest.mark.parametrize("chunk", [50, 1 << 24])
+@pytest.mark.parametrize(
+    ("change", "said"),
+    [
+        (lambda s: s.replace("0,1,0.5,1\n", "0,1,0.5\n"), "in line 3, as the header has, got 3: '0,1,0.5'"),
+        (lambda s: s.replace("0,1,0.5,1\n", "0,1\n\n"), "in line 3, as the header has, got 2: '0,1'"),
+        (lambda s: s[: s.rindex(",")], "in line 61, as the header has, got 3: '0,59,0.5'"),
+        (lambda s: s.replace("0,0,", '"0",0,', 1).replace("9,0.5,9", "9", 1), "in line 11, as the header has, got 2: '0,9'"),
+        (lambda s: s.replace("0,9,0.5,9", "7").replace("\n", "\r\n"), "in line 11, as the header has, got 1: '7'"),
+    ],
+)  # fmt: skip
+def test_a_line_with_fewer_fields_than_the_header_is_refused(tmp_path, monkeypatch, chunk, change, said):
+    monkeypatch.setattr("procgen.checks.files._CHUNK", chunk)
+    (tmp_path / "t.csv").write_bytes(change(LINES).encode())
+    text = refused(tmp_path / "t.csv")
+    assert f"expected 4 fields between commas {said}; is it cut off? Of a value that is missing the field is" in text
+
+
+@pytest.mark.parametrize("end", ["\n", "\r\n"])
+@pytest.mark.parametrize("quoted", [False, True])
+def test_blank_lines_are_skipped_and_empty_fields_are_missing_values(frame, tmp_path, end, quoted):
+    text = frame.to_csv(index=False).replace("\n", "\n\n  \n", 3) + "\n \n"
+    text = text.replace("path", '"path"') if quoted else text
+    (tmp_path / "t.csv").write_bytes(text.replace("\n", end).encode())
+    assert validate(tmp_path / "t.csv", SPEC).agrees is True
+    frame.assign(y=frame["y"].where(frame["step"] != 7)).to_csv(tmp_path / "u.csv", index=False)
+    assert "150 values are not finite" in " ".join(validate(tmp_path / "u.csv", SPEC).headline)
+
+
 @pytest.mark.parametrize("style", ["plain", "quoted", "windows"])
 def test_lines_as_they_should_be_are_not_refused(frame, tmp_path, monkeypatch, style):
     monkeypatch.setattr("procgen.checks.files._CHUNK", 4096)
