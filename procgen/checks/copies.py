@@ -1,9 +1,9 @@
 """Values that repeat where chance repeats none: a value that stays, and a stretch of steps that is there twice.
 
-Runs of one value are followed along each path. Of stretches, those that end in a value whose bits say so (about one
-value in 16) are marked by a hash over their values: wherever a stretch is copied to, the same ends are marked (Manber
-1994, Finding similar files in a large file system). Of too many marks the smallest hashes are kept, which again are
-the same in a copy (Broder 1997, On the resemblance and containment of documents).
+Runs of one value are followed along each path. Of stretches, those that end in values whose bits say so (one in 16,
+or fewer where there are many values) are marked by a hash over their values: wherever a stretch is copied to, the same
+ends are marked (Manber 1994, Finding similar files in a large file system). Of too many marks the smallest hashes are
+kept, which again are the same in a copy (Broder 1997, On the resemblance and containment of documents).
 """
 
 from __future__ import annotations
@@ -21,7 +21,7 @@ from procgen.checks.verdict import Check
 STUCK, COPIED = "values that stay", "copied stretches"
 KEPT = 1 << 17  # marks of a series
 SHORTEST, LONGEST = 4, 32  # values in a marked stretch
-_ENDS = np.uint64(60)  # bits of a hash that are not looked at: one value in 2 ** 4 ends a marked stretch
+_OFTEN = 4  # one stretch in 2 ** 4 is marked, at most
 _VALUES = 1e10  # as many values as an ensemble may be thought to have
 _CERTAIN = 1e-12  # expected number of repeats by chance below which one is no chance
 _LIKELY = 0.5  # chance of one more equal value, from which on nothing is said
@@ -40,9 +40,19 @@ Run = list[int]  # length, minus path, minus first step: a list, as JSON has it
 
 @dataclass(frozen=True)
 class Repeats:
-    """How likely a value is, at most, to fall into one given cell of its rounding, whatever came before it."""
+    """How likely a value is, at most, to fall into one given cell of its rounding, whatever came before it.
+
+    `values` is about how many there are in all paths: it decides how many stretches are marked.
+    """
 
     chance: float
+    values: int = 0
+
+    @property
+    def ends(self) -> np.uint64:
+        """A stretch is marked where the hash of its last values is below this one."""
+        bits = max(_OFTEN, math.ceil(math.log2(max(2 * self.values / KEPT, 1))))
+        return np.uint64(2 ** (64 - bits) - 1)
 
     @property
     def length(self) -> int:
@@ -55,10 +65,11 @@ class Repeats:
         return max(SHORTEST, 1 + math.ceil(math.log(_CERTAIN / _VALUES) / math.log(self.chance)))
 
 
-def repeats_of(plan: Any, way: Any, graph: Any, lumpy: bool) -> Repeats | None:
+def repeats_of(plan: Any, way: Any, graph: Any, lumpy: bool, values: int) -> Repeats | None:
     """What chance may repeat of a series; None where that is not known, or where it may repeat much.
 
-    `plan`, `way`: its SeriesPlan and its way to its shocks, a Route or the reason why there is none.
+    `plan`, `way`: its SeriesPlan and its way to its shocks, a Route or the reason why there is none; `values`: about
+    how many there are in all paths.
     """
     kinds = {node.term.kind for node in graph.order([graph.series[plan.name]]) if getattr(node, "term", None)}
     drawn = plan.drawn[plan.steps > 0]
@@ -75,7 +86,8 @@ def repeats_of(plan: Any, way: Any, graph: Any, lumpy: bool) -> Repeats | None:
         chance = cell / (math.sqrt(2.0 * math.pi) * kalman.roots[-1])  # a normal density at its peak
     else:  # shocks may be much smaller than values, and densities much higher than a normal one
         chance = 1e3 * cell / math.sqrt(float(drawn.min()))
-    return Repeats(chance) if 0.0 < chance < _LIKELY and Repeats(chance).length <= LONGEST else None
+    repeats = Repeats(chance, values)
+    return repeats if 0.0 < chance < _LIKELY and repeats.length <= LONGEST else None
 
 
 def _with_laws(theory: Any) -> Iterator[Any]:
@@ -100,21 +112,27 @@ class Marks:
         return self.hashes, self.values, self.paths, self.steps
 
     def joined(self, *others: Marks) -> Marks:
-        """These and others, the smallest hashes of them."""
+        """These and others, the KEPT smallest hashes of them, in any order."""
         parts = zip(*(each.arrays for each in (self, *others)), strict=True)
-        all_of_them = Marks(*map(np.concatenate, parts))
-        return all_of_them.ordered(KEPT) if len(all_of_them.hashes) > KEPT else all_of_them
+        marks = Marks(*map(np.concatenate, parts))
+        if len(marks.hashes) <= KEPT:
+            return marks
+        last = np.partition(marks.hashes, KEPT - 1)[KEPT - 1]
+        marks = marks.at(marks.hashes <= last)
+        return marks if len(marks.hashes) == KEPT else marks.ordered().at(slice(KEPT))
 
-    def ordered(self, most: int | None = None) -> Marks:
-        order = np.lexsort((self.steps, self.paths, self.values, self.hashes))[:most]
-        return Marks(*(values[order] for values in self.arrays))
+    def ordered(self) -> Marks:
+        return self.at(np.lexsort((self.steps, self.paths, self.values, self.hashes)))
+
+    def at(self, which: Any) -> Marks:
+        return Marks(*(values[which] for values in self.arrays))
 
 
 class Watch:
     """What is carried for a range of paths of one series."""
 
     def __init__(self, repeats: Repeats, first_path: int, paths: int):
-        self.length, self.first_path, self.step = repeats.length, first_path, 0
+        self.length, self.ends, self.first_path, self.step = repeats.length, repeats.ends, first_path, 0
         self.before = np.full((self.length - 1, paths), np.nan)
         self.run = np.ones(paths, dtype=np.int64)
         self.longest: Run = [1, -first_path, 0]
@@ -142,8 +160,10 @@ class Watch:
             self.run[:] = 1
 
     def _mark(self, rows: NDArray) -> None:
-        bits = np.ascontiguousarray(rows[self.length - 1 :]).view(np.uint64)
-        step, path = np.nonzero((bits * _MIX[0]) >> _ENDS == 0)
+        mixed = rows[self.length - 3 :].view(np.uint64) * _MIX[0]
+        # of the last three values: where they are rounded, single ones are too few to choose among
+        end = mixed[2:] ^ (mixed[1:-1] >> np.uint64(1)) ^ (mixed[:-2] >> np.uint64(2))
+        step, path = np.nonzero(end <= self.ends)
         grams = rows[step[:, None] + np.arange(self.length), path[:, None]]
         moving = np.isfinite(grams).all(axis=1) & (grams[:, 0] != grams[:, -1])  # a value that stays is told as one
         step, path, grams = step[moving], path[moving], grams[moving]

@@ -21,7 +21,7 @@ from procgen.checks.words import FARTHEST, number
 COUNTED = 32  # values of a series that are counted, the most that are kept of one value
 KEPT = COUNTED + 1  # one more shows whether there are others than these
 _LEAST = 4.0  # standard deviations, below which a value is of no interest
-_CHUNK = 4096  # steps whose theory is asked for at once
+_CHUNK = 1 << 15  # steps whose theory is asked for at once, at most
 _OUTSIDE = math.log(0.05)  # of a value that is farther than all values of N should be
 _ABSURD = 2.0  # times as far as the farthest of N should be
 _RARE = 1000  # one absurd value in so many is an accident, more of them are a behaviour
@@ -32,8 +32,8 @@ Far = list[Any]  # size in sd, minus path, minus step, value, mean, sd: a list, 
 class Reach:
     """Mean and standard deviation of every step of a series, and the chance of a value so far away."""
 
-    def __init__(self, theory: Any, grain: float):
-        self.theory, self.grain = theory, grain
+    def __init__(self, theory: Any, grain: float, steps: int = _CHUNK):
+        self.theory, self.grain, self.size = theory, grain, min(steps, _CHUNK)
         self._chunks: dict[int, tuple[NDArray, NDArray]] = {}
         self._kurtosis: dict[int, float | None] = {}
 
@@ -56,17 +56,17 @@ class Reach:
         return merged(found)
 
     def _at(self, first: int, count: int) -> tuple[NDArray, NDArray]:
-        chunks = [self._chunk(k) for k in range(first // _CHUNK, (first + count - 1) // _CHUNK + 1)]
-        cut = slice(first % _CHUNK, first % _CHUNK + count)
+        chunks = [self._chunk(k) for k in range(first // self.size, (first + count - 1) // self.size + 1)]
+        cut = slice(first % self.size, first % self.size + count)
         mean, sd = (np.concatenate(parts)[cut] for parts in zip(*chunks, strict=True))
         return mean, sd
 
     def _chunk(self, k: int) -> tuple[NDArray, NDArray]:
         if k not in self._chunks:
-            steps = np.arange(k * _CHUNK, (k + 1) * _CHUNK)
+            steps = np.arange(k * self.size, (k + 1) * self.size)
             mean, variance = self.theory.mean(steps), self.theory.variance(steps)
             if mean is None or variance is None:
-                mean = variance = np.full(_CHUNK, np.nan)
+                mean = variance = np.full(self.size, np.nan)
             while len(self._chunks) > 3:
                 self._chunks.pop(next(iter(self._chunks)))
             usable = np.isfinite(variance) & (variance > 0.0)

@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 from procgen.checks import copies, extremes, support
 from procgen.checks.verdict import Check
 
+_AT_ONCE = 1 << 14  # values of a fingerprint: what is computed on the way stays in the cache
 _SAMPLE = 61  # every so manieth step's bits are looked at for a detour through float32; at least 32 steps
 _SPACING = {"float32": 2.0**-24 + 4e-16}  # how far, of its size, a stored decimal number may lie from itself
 _CERTAIN = 1e-12  # expected number of equal pairs below which one equal pair is no chance
@@ -225,10 +226,12 @@ def fingerprint(x: NDArray, first_step: int, column: int) -> NDArray[np.uint64]:
     bits = np.ascontiguousarray(x, dtype=np.float64).view(np.uint64)
     weights = _odd(np.arange(first_step, first_step + len(x), dtype=np.uint64), column)
     total = np.zeros(x.shape[1], dtype=np.uint64)
-    for start in range(0, len(x), 64):
-        part = bits[start : start + 64]
+    count = max(_AT_ONCE // x.shape[1], 1)
+    for start in range(0, len(x), count):
+        part = bits[start : start + count]
         mixed = part ^ (part >> np.uint64(32))
-        total += (mixed * weights[start : start + 64, None]).sum(axis=0, dtype=np.uint64)
+        mixed *= weights[start : start + count, None]
+        total += mixed.sum(axis=0, dtype=np.uint64)
     return total
 
 

@@ -121,6 +121,7 @@ def gathered(plan: Plan, blocks: Blocks) -> Gather:
 def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Plan:
     """Everything that the pass over the data must know, from the spec's theory; `same_draws` as for `route`."""
     from procgen.terms.graph import build
+    from procgen.terms.supports import column_type
     from procgen.theory import theory
 
     graph = build(spec)
@@ -139,12 +140,14 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
         series.append(plan)
         routes[name] = way
         random = th[name].random
-        reach = Reach(th[name], grain) if random else None
+        reach = Reach(th[name], grain, steps) if random else None
         possible = possible_of(graph, name, declared, vanishes(th[name], steps)) if random else Possible()
         precision.append(
-            Precision(name, declared.type, declared.decimals, random, lumpy(th[name]), reach, possible=possible)
+            Precision(name, column_type(graph, name), declared.decimals, random, lumpy(th[name]), reach, possible=possible)
         )
-        precision[-1].repeats = repeats_of(plan, way, graph, lumpy(th[name])) if random else None
+        precision[-1].repeats = (
+            repeats_of(plan, way, graph, lumpy(th[name]), spec.paths * steps) if random else None
+        )
     ways = [way for way in routes.values() if isinstance(way, Route) and way.scores is not None]
     pairs = {(a.series, b.series): expected(a, b, th.axis.space) for a, b in list(combinations(ways, 2))[:PAIR_LIMIT]}
     unseen = [name for name, way in routes.items() if isinstance(way, Cannot) or way.scores is None]
