@@ -82,6 +82,13 @@ def ratio(a: float, m: int, b: float, n: int) -> Finding:
     return Finding(1.0, f, error, log_p, lambda level: power.ratio(level, m, n))
 
 
+def evenness(a: float, m: int, b: float, n: int) -> Finding:
+    """Whether `a` is smaller than chance leaves it, beside `b`: as `ratio`, but small ratios alone depart; exact."""
+    f = (a / m) / (b / n) if b > 0 else 1.0
+    error = math.sqrt(2 / m + 2 / n)
+    return Finding(1.0, f, error, tails.ratio_below(f, m, n), lambda level: power.evenness(level, m, n))
+
+
 def covariance(c: float, s1: float, s2: float, rho: float, dof: int) -> Finding:
     """A sample covariance of jointly normal pairs, standard deviations and correlation stated: exact."""
     log_p = tails.two_sided(*tails.covariance(c, s1, s2, rho, dof))

@@ -15,6 +15,7 @@ from procgen.checks.saddle import REACH, sum_finding
 from procgen.checks.scores import Scores, largest_gap
 from procgen.checks.shocks import CLUSTER_LAGS, CrossSums, ShockSums
 from procgen.checks.verdict import Check
+from procgen.checks.words import BALANCE
 
 _EXACT_BELOW = 5_000  # products fewer than this are judged by their exact law
 _CLUSTER_SKEW = 0.408163  # (E s^3)^2 of a cluster score s = sqrt(5) P2, which is (2 sqrt(5) / 7)^2
@@ -172,7 +173,8 @@ def _by_step(series: str, sums: ShockSums) -> Iterator[Check]:
         return
     n = sums.n
     level = total / np.sqrt(count)
-    upper, lower = chi_square_logs(square - total**2 / count, count - 1)
+    within = square - total**2 / count
+    upper, lower = chi_square_logs(within, count - 1)
     spread = np.where(upper < lower, -ndtri(np.exp(np.maximum(upper, -700))), ndtri(np.exp(np.maximum(lower, -700))))
     # The spread is seen against its mean over steps: one that is wrong at all steps alike is told by itself.
     apart = float(spread @ spread) - float(spread.sum()) ** 2 / spread.size
@@ -180,8 +182,15 @@ def _by_step(series: str, sums: ShockSums) -> Iterator[Check]:
         finding = judge.squares(q, z.size - dof, n)
         yield Check.of(series, f"shocks: {kind} by step", "sum over steps", kind, finding)
         yield Check.of(series, f"shocks: {kind} by step", *_worst_step(sums, z, kind))
+    yield _balance(series, float(level @ level), float(within.sum()), count)
     if sums.period and sums.width == 1 and sums.period < count.size:
         yield _season(series, sums, sums.period)
+
+
+def _balance(series: str, between: float, within: float, count: NDArray) -> Check:
+    """Whether the paths' mean at a step varies less than that of independent ones: as that of mirrored ones does."""
+    finding = judge.evenness(between, count.size, within, int(count.sum()) - count.size)
+    return Check.of(series, BALANCE, "sum over steps", "dependence", finding)
 
 
 def _season(series: str, sums: ShockSums, period: int) -> Check:

@@ -1,7 +1,7 @@
 """Detectable sizes: the smallest departure that a check finds 9 times in 10 at a given level.
 
 `level` is the two-sided level that one check works at (the family's level divided by the number of checks).
-Departures are upward ones, in the unit of the check's estimate.
+Departures are upward ones (of an evenness, downward), in the unit of the check's estimate.
 """
 
 from __future__ import annotations
@@ -85,6 +85,14 @@ def ratio(level: float, m: int, n: int) -> float:
     # m F / (n + m F) has a beta law, and so has what is left of 1.
     low, high = float(betaincinv(n / 2, m / 2, level / 2)), float(betaincinv(m / 2, n / 2, 1 - POWER))
     return (1 - low) * (1 - high) / (low * high) - 1
+
+
+def evenness(level: float, m: int, n: int) -> float:
+    """How far below 1 a ratio of two normal variances is found by its lower tail alone, exactly."""
+    from scipy.special import betaincinv
+
+    low, usual = (float(betaincinv(m / 2, n / 2, p)) for p in (level, POWER))
+    return 1 - low * (1 - usual) / (usual * (1 - low))
 
 
 def covariance(level: float, s1: float, s2: float, rho: float, n: int) -> float:

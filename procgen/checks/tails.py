@@ -38,6 +38,18 @@ def chi_square(q: float, dof: float) -> tuple[float, float]:
     )
 
 
+def ratio_below(f: float, m: float, n: float) -> float:
+    """log P(F < f) of Fisher's ratio of two chi-squares, m and n degrees of freedom, each divided by these."""
+    from scipy.special import betainc, betaln
+
+    x = max(m * f / (n + m * f), 1e-300)
+    tail = float(betainc(m / 2, n / 2, x))
+    if tail > 1e-290:
+        return math.log(tail)
+    lead = 0.5 * m * math.log(x) + 0.5 * n * math.log1p(-x) - math.log(m / 2) - float(betaln(m / 2, n / 2))
+    return min(0.0, lead)  # the first term of its series: where it underflows, only ranks need it
+
+
 def _log_or(tail: float, q: float, dof: float, above: bool) -> float:
     """log of a chi-square tail; where it underflows, the exponent of Chernoff's bound (only ranks need it)."""
     if tail > 1e-290:

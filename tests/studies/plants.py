@@ -84,6 +84,11 @@ def shifted(x: np.ndarray, size: float, axis: int) -> np.ndarray:
     return x + _halves(x, size, axis)
 
 
+def evened(x: np.ndarray, size: float) -> np.ndarray:
+    """The paths' mean at each step drawn to 0: its variance is 1 - size times what it was, as if some were mirrored."""
+    return x - (1 - math.sqrt(1 - size)) * x.mean(axis=0)
+
+
 def swayed(x: np.ndarray, size: float, length: int) -> np.ndarray:
     """The mean of each stretch of so many steps made larger: the variance of its sum is 1 + size times what it was."""
     whole = x.shape[1] // length * length
