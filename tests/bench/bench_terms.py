@@ -3,9 +3,10 @@
     python tests/bench/bench_terms.py [--quick] [--rounds 3] [--only KIND ...] [--laws]
 
 Each term is drawn as its own example (`procgen terms KIND`), whatever that holds: a body below it is drawn too, and
-`draws` says how many numbers of chance a value takes. Kernels are compiled where numba is installed. Rounds are
-interleaved with white noise, so that a slow minute of the machine meets both; the table gives medians, of processor
-time, and is Markdown. `--laws` draws white noise of every law instead.
+`draws` says how many numbers of chance a value takes. Where one value is made of k finer steps of a body (`aggregate`,
+`subsample`), `of` is k, and white noise of k times as many values is what it is held against. Kernels are compiled
+where numba is installed. Rounds are interleaved with white noise, so that a slow minute of the machine meets both; the
+table gives medians, of processor time, and is Markdown. `--laws` draws white noise of every law instead.
 """
 
 from __future__ import annotations
@@ -51,17 +52,19 @@ def main() -> None:
     print(f"{paths:,} × {steps:,}, median of {args.rounds}, {os.cpu_count()} processors, Python", end=" ")
     numba = "numba" if kernel.available() else "no numba"
     print(f"{platform.python_version()}, NumPy {np.__version__}, {numba}\n")
-    print("| term | draws | ns a value | white noise | times | |\n| --- | ---: | ---: | ---: | ---: | --- |")
+    print("| term | of | draws | ns a value | white noise | times | |")
+    print("| --- | ---: | ---: | ---: | ---: | ---: | --- |")
     values = paths * steps / 1e9
     for name, text in chosen.items():
         draw = drawer(text, paths, steps)
         draw()  # compiles, and makes tables
-        count = sum(source.pace for source in build(spec_of(text, paths, steps)).sources)
-        rounds = [(seconds(draw), seconds(draw_white)) for _ in range(args.rounds)]
+        graph = build(spec_of(text, paths, steps))
+        count = sum(source.pace for source in graph.sources)
+        rounds = [(seconds(draw), graph.pace * seconds(draw_white)) for _ in range(args.rounds)]
         times = statistics.median(a / b for a, b in rounds)
         own, white = (statistics.median(part) / values for part in zip(*rounds, strict=True))
         slow = "slow" if times > ALLOWED else ""
-        print(f"| {name} | {count} | {own:.1f} | {white:.1f} | {times:.2f} | {slow} |", flush=True)
+        print(f"| {name} | {graph.pace} | {count} | {own:.1f} | {white:.1f} | {times:.2f} | {slow} |", flush=True)
 
 
 def arguments() -> argparse.Namespace:
