@@ -1,6 +1,6 @@
 """How often true ensembles are said to depart, by family of specs, shape and level.
 
-    python tests/studies/false_alarms.py [--quick] [--seeds 2000] [--only FAMILY] [--out FILE [--resume]]
+    python tests/studies/false_alarms.py [--quick] [--seeds 2000] [--only FAMILY] [--workers 2] [--out FILE [--resume]]
 
 Every run draws an ensemble exactly as stated and judges it. Printed in Markdown: the share flagged at each level with
 its 99.9 % binomial interval, by family and pooled, and how often each kind of check had a small p. With --out, each
@@ -11,13 +11,16 @@ from __future__ import annotations
 
 import argparse
 import json
+import os
 import sys
 from collections import Counter, defaultdict
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator, Mapping, Sequence
+from concurrent.futures import ProcessPoolExecutor
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
+os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")  # before NumPy is imported, as the command does
 import numpy as np
 
 sys.path.insert(0, str(Path(__file__).resolve().parents[2]))
@@ -153,21 +156,33 @@ def done(out: Path) -> dict[str, tuple[str, Tally]]:
     return found
 
 
+def answered(work: Sequence[tuple[str, tuple[int, int], range]], workers: int) -> Iterator[Tally]:
+    """The tallies of some jobs, in their order."""
+    if workers == 1:
+        yield from (run(*job) for job in work)
+    else:
+        with ProcessPoolExecutor(workers) as pool:
+            yield from (each.result() for each in [pool.submit(run, *job) for job in work])
+
+
 def main() -> None:
     parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
     parser.add_argument("--seeds", type=int, default=2000, help="runs of a family of OFTEN, over all shapes")
     parser.add_argument("--quick", action="store_true", help="about 50 runs a family")
     parser.add_argument("--only", default="", help="families whose name contains this")
+    parser.add_argument("--workers", type=int, default=1, help="processes")
     parser.add_argument("--out", type=Path, help="a file that gets a line for each finished job")
     parser.add_argument("--resume", action="store_true", help="leave out the jobs that --out already has")
     options = parser.parse_args()
     known = done(options.out) if options.out and options.resume else {}
     if options.out and not options.resume:
         options.out.write_text("")
+    work = list(jobs(50 if options.quick else options.seeds, options.only))
+    fresh = answered([job for job in work if _key(*job) not in known], options.workers)
     tallies: dict[str, Tally] = defaultdict(Tally)
-    for job in jobs(50 if options.quick else options.seeds, options.only):
+    for job in work:
         key = _key(*job)
-        tally = known[key][1] if key in known else run(*job)
+        tally = known[key][1] if key in known else next(fresh)
         if options.out and key not in known:
             with options.out.open("a") as file:
                 file.write("\n" + json.dumps({"job": key, "family": job[0], **tally.to_dict()}))
