@@ -21,6 +21,7 @@ from procgen.checks.relations import Relation
 from procgen.checks.shocks import FAR, MEMORY_LAGS, NEAR, SHOCK_ARRAYS, CrossSums, ShockSums
 from procgen.checks.special import EventSums
 from procgen.checks.squares import Squares, SquareSums
+from procgen.checks.start import comparable, differences
 from procgen.checks.structure import Precision, Structure
 from procgen.checks.sums import Kept, Moments, Powers
 from procgen.checks.tied import TiedSums
@@ -61,6 +62,8 @@ class Plan:
         }
         self.moment_pairs += list(between)
         self.gappy = np.repeat([plan.name in self.gaps for plan in self.series], sizes)
+        whole = [column for column, plan in enumerate(self.series) if plan.name not in self.gaps]
+        self.starts = [column for column in whole if comparable(self.series[column], self.steps)]
         self.kept = [(column, i) for column, plan in enumerate(self.series) for i in sorted(plan.scores)]
 
     def seen_with(self, place: int) -> list[int]:
@@ -122,6 +125,7 @@ class Gather:
         self.crossed = Powers(sum(len(pair.places) for pair in plan.cross))
         self.pooled = [Powers(p.pool.size) if p.pool else None for p in plan.series]
         self.related = [Powers(relation.pool.size) for relation in plan.relations]
+        self.starts = Powers(len(plan.starts))
         self.kept = Kept(len(plan.kept))
         self.routes = {name: way for name, way in plan.routes.items() if isinstance(way, Route)}
         scores = {name: way.scores for name, way in self.routes.items() if way.scores is not None}
@@ -145,6 +149,7 @@ class Gather:
         self.moments.absorb(np.where(plan.gappy, 0.0, rows))  # gaps of one series must not cost the others their paths
         self.deviations.absorb(rows)
         self.products.absorb(_products(plan, rows))
+        self.starts.absorb(_starts(plan, rows))
         self.crossed.absorb(_cross_products(plan, rows))
         self.kept.absorb(probes[:, [plan.offset[column] + i for column, i in plan.kept]])
         for powers, averages in zip(self.pooled, pools, strict=True):
@@ -156,7 +161,7 @@ class Gather:
     def merge(self, other: Gather) -> None:
         """Add the sums of the paths that follow."""
         self.paths += other.paths
-        for name in ("structure", "moments", "deviations", "products", "crossed", "kept"):
+        for name in ("structure", "moments", "deviations", "products", "crossed", "starts", "kept"):
             getattr(self, name).merge(getattr(other, name))
         for ours, theirs in zip(self.pooled, other.pooled, strict=True):
             if ours is not None and theirs is not None:
@@ -207,7 +212,7 @@ class Gather:
         return self
 
     def _powers(self) -> list[Powers]:
-        found = [self.deviations, self.products, self.crossed, *(p for p in self.pooled if p is not None)]
+        found = [self.deviations, self.products, self.crossed, self.starts, *(p for p in self.pooled if p is not None)]
         found += self.related
         found += [powers for e in self.errors.values() for powers in (e.powers, e.beside)]
         return found + [powers for each in self.squares.values() for powers in each.all_powers()]
@@ -245,6 +250,15 @@ def _products(plan: Plan, rows: NDArray) -> NDArray:
             elif not series.constant[i]:
                 out[:, k] = rows[:, at + i] * (rows[:, at + j] - known / series.variance[i] * rows[:, at + i])
     return out
+
+
+def _starts(plan: Plan, rows: NDArray) -> NDArray:
+    """How much larger each series to be judged so is at its start than at its end, by path."""
+    columns = []
+    for column in plan.starts:
+        mine = rows[:, plan.offset[column] : plan.offset[column + 1]]
+        columns.append(differences(mine, float(plan.series[column].variance[0])))
+    return np.array(columns).T if columns else np.zeros((len(rows), 0))
 
 
 def _cross_products(plan: Plan, rows: NDArray) -> NDArray:

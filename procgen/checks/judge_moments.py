@@ -13,6 +13,7 @@ from procgen.checks.judge import Finding
 from procgen.checks.judge_pools import pooled_checks
 from procgen.checks.limits import limit, sample_of
 from procgen.checks.probes import CrossPlan, SeriesPlan
+from procgen.checks.start import start_checks
 from procgen.checks.verdict import Check
 
 _QUANTILES = (0.01, 0.99)
@@ -35,6 +36,8 @@ def moment_checks(gather: Gather, column: int) -> Iterator[Check]:
     yield from _growth(gather, column)
     yield from _laws(gather, column)
     yield from pooled_checks(gather, column)
+    if column in gather.plan.starts:
+        yield from start_checks(plan.name, plan.steps, sample_of(gather.starts, gather.plan.starts.index(column)))
 
 
 def _constant(gather: Gather, column: int, i: int) -> Check:

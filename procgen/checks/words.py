@@ -32,6 +32,7 @@ _OUTCOMES = {"agrees": "agree", "departs": "depart"}  # of several
 _MORE_LESS = {"level": ("higher than", "lower than"), "spread": ("larger than", "smaller than")}
 _SIGNED = ("mean", "variance", "level score", "spread score")  # how the checks end whose sign says more or less
 BALANCE = "shocks: balance of paths"
+START = "size of the start"
 _BETWEEN_PATHS = ("shocks: neighbouring paths", "neighbouring paths", BALANCE)
 _WHOLE = {
     "shocks: level by step": "the shocks' mean at a step is off by {} of their sd, root mean square",
@@ -40,6 +41,7 @@ _WHOLE = {
     "shocks: level by path": "each path keeps a level of its own, by {} of a shock's sd, root mean square",
     "shocks: spread by path": "each path keeps a spread of its own, by {} a shock",
     BALANCE: "the paths' mean shock has {} of the variance that independent paths give it",
+    START: "the first values' mean size, y²/(1 + y²) for y in sd, less that of the last ones is {}",
     "shocks: shape of the law": "the shocks' density is off by {}, root mean square",
     "shocks: distribution function": "the shocks' distribution function is off by up to {}",
 }
@@ -147,6 +149,8 @@ def _says(top: Check) -> str:
         return "lengths of stays are not as stated"
     if top.what in _BETWEEN_PATHS:
         return "paths are not independent of each other"
+    if top.what == START:
+        return f"the series starts {'narrower' if (top.estimate or 0.0) < 0 else 'wider'} than it goes on"
     way = "not the one"
     if is_signed(top) and top.kind in _MORE_LESS and top.estimate is not None and top.theory is not None:
         way = _MORE_LESS[top.kind][int(top.estimate < top.theory)]

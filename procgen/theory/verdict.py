@@ -45,12 +45,14 @@ class Stationarity:
 
     `stationary`: mean and autocovariances do not depend on the step. `covariance_stationary`: the
     autocovariances do not, so that deviations from the (known) mean may be pooled over time.
+    `strict_deviations`: no joint law of these deviations does.
     """
 
     verdict: str
     reasons: tuple[str, ...]
     stationary: bool
     covariance_stationary: bool
+    strict_deviations: bool = False
 
     def __iter__(self):
         return iter((self.verdict, self.reasons))
@@ -83,6 +85,7 @@ def judge(x: Expression) -> Stationarity:
         tuple(dict.fromkeys(reasons)) or ("the same function of independent shocks at every step",),
         stationary=not set(found) - {WEAK},
         covariance_stationary=not set(found) - {WEAK, MEAN},
+        strict_deviations=not set(found) - {MEAN},
     )
 
 

@@ -19,6 +19,7 @@ from procgen.checks.judge import Finding, Sample
 from procgen.checks.scores import BINS, Scores, cluster_scores
 from procgen.checks.shocks import CrossSums, ShockLane, ShockSums
 from procgen.checks.squares import hidden
+from procgen.checks.start import BLOCK, differences
 from tests.studies.calibration import Case, Findings, far, of_one_number
 
 Rng = np.random.Generator
@@ -142,6 +143,16 @@ def squares_slope(draw: Draw, n: int, steps: int) -> Findings:
     def findings(rng: Rng, count: int) -> Iterator[tuple[Finding, int]]:
         q = draw(rng, (steps, count, n)) ** 2 - 1
         return sample_findings(np.einsum("tcn,tcn->cn", q[1:], q[:-1]) / (steps - 1), None, times=hidden(steps))
+
+    return findings
+
+
+def start_of(draw: Draw, n: int) -> Findings:
+    """The sizes of two first values less those of two last ones, path by path."""
+
+    def findings(rng: Rng, count: int) -> Iterator[tuple[Finding, int]]:
+        sizes = differences(draw(rng, (count * n, 2 * BLOCK)), 1.0)
+        return sample_findings(sizes.reshape(count, n), None)
 
     return findings
 
@@ -444,6 +455,10 @@ CASES = (
     Case("slope of squares, 200 paths of 20 steps, Laplace", 100_000, squares_slope(laplace, 200, 20), 4000),
     Case("slope of squares, 2,000 paths of 20 steps, Laplace", 10_000, squares_slope(laplace, 2000, 20), 40_000),
     Case("slope of squares, 500 paths of 200 steps, Laplace", 5_000, squares_slope(laplace, 500, 200), 100_000),
+    Case("size of the start, 100 of t(4)", 2_000_000, start_of(student(4), 100), 400),
+    Case("size of the start, 2,000 of t(4)", 100_000, start_of(student(4), 2000), 8000),
+    Case("size of the start, 100 lognormals (σ 1)", 2_000_000, start_of(lognormal(1.0), 100), 400),
+    Case("size of the start, 500 flags of share 0.02", 200_000, start_of(rare(0.02), 500), 2000),
     Case("neighbouring paths, 100 normal averages", 2_000_000, paths_side_by_side(normal, 100), 100),
     Case("neighbouring paths, 100 exponentials", 2_000_000, paths_side_by_side(exponential, 100), 100),
     Case("neighbouring paths, 100 lognormals (σ 1)", 2_000_000, paths_side_by_side(lognormal(1.0), 100), 100),
