@@ -146,8 +146,7 @@ def difference(grid: NDArray[np.int64], times: Times, time: Any) -> str:
         return _no_hours(times, time)
     seen = np.unique(times.utc)
     zone = f", or else as {time.zone}" if times.local is not None else ""
-    count, unit = time.every
-    expected = f"expected every {count} {unit}{'s' if count > 1 and unit not in ('min', 'h', 's') else ''}"
+    expected = _expected(time)
     same = len(seen) < 2 or len(grid) < 2 or np.array_equal(np.diff(seen)[:1], np.diff(grid)[:1])
     got = "" if same else f"every {_length(int(np.median(np.diff(seen))))}, "
     shift = int(seen[0] - grid[0])
@@ -161,6 +160,13 @@ def difference(grid: NDArray[np.int64], times: Times, time: Any) -> str:
     return text + (f"; times without a zone are read as UTC{zone}" if zone else "")
 
 
+def _expected(time: Any) -> str:
+    if time.at:
+        return f"expected the times listed in the spec ({time.length} apart on average)"
+    count, unit = time.every
+    return f"expected every {count} {unit}{'s' if count > 1 and unit not in ('min', 'h', 's') else ''}"
+
+
 def _lacks_hours(times: Times, grid: NDArray[np.int64]) -> bool:
     """Whether all times are midnights of several days, on a grid that has other hours."""
     halves = _UNITS[0][0] // 2  # a day on which clocks change is shorter than 24 h, and no hour is missing in it
@@ -168,11 +174,11 @@ def _lacks_hours(times: Times, grid: NDArray[np.int64]) -> bool:
 
 
 def _no_hours(times: Times, time: Any) -> str:
-    count, unit = time.every
     day = _stamp(times.utc[0])[:10]
+    often = f"steps {time.length} apart on average" if time.at else f"a step every {time.length}"
     return (
-        f"times in {times.column.name} have no hour, only dates such as {day}, where the spec has a step every "
-        f"{count} {unit}; write them with hours, such as {day}T06:00"
+        f"times in {times.column.name} have no hour, only dates such as {day}, where the spec has {often}; "
+        f"write them with hours, such as {day}T06:00"
     )
 
 

@@ -30,7 +30,7 @@ def schema() -> Schema:
     """The JSON Schema of a spec, as plain data."""
     head = mapping_of(HEAD)
     sections = {
-        "time": mapping_of(TIME),
+        "time": time(),
         "reuse": {"description": "a home for YAML anchors, otherwise ignored"},
         "shared": named({"anyOf": [BODY, mapping({"of": BODY}, ["of"])]}),
         "series": named({"anyOf": [BODY, mapping_of(SERIES)]}),
@@ -52,6 +52,12 @@ def schema() -> Schema:
             "law": {"anyOf": [law for name in LAWS for law in ways(LAWS[name])]},
         },
     }
+
+
+def time() -> Schema:
+    """The time of a spec: its steps, or the list of their times."""
+    form = mapping_of(TIME)
+    return {**form, "required": [], "anyOf": [{"required": [name]} for name in (*form["required"], "at")]}
 
 
 def declared() -> list[Schema]:

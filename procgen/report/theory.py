@@ -66,8 +66,10 @@ def head(spec: Spec) -> str:
     """Title, size, seed and time in two lines."""
     grid = spec.time
     size = f"{_many(spec.paths, 'path')} × {_many(grid.steps, 'step')}"
-    if grid.every:
-        size += f" of {grid.every[0]} {grid.every[1]}"
+    if grid.at:
+        size += f" at listed times, {grid.length} apart on average,"
+    elif grid.every:
+        size += f" of {grid.length}"
     if grid.start:
         size += f" from {grid.start:%Y-%m-%d %H:%M} ({grid.zone or 'UTC'})"
     return "\n".join([*([spec.title] if spec.title else []), f"{size}, seed {spec.seed}"])

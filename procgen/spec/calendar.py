@@ -8,6 +8,8 @@ Where a calendar step falls on a local time that the change of clocks skips, it 
 the change (02:30 becomes 03:30); where a local time happens twice, it is the first, or the one whose offset
 `start` was written with. A whole day that a zone skipped (Samoa, 30 December 2011) is the same instant as the
 next.
+
+Where the times are listed, steps are at these; before the first and after the last, all are the mean length apart.
 """
 
 from __future__ import annotations
@@ -16,6 +18,7 @@ from collections.abc import Callable
 from dataclasses import dataclass, replace
 from datetime import date, datetime, time, timedelta
 from fractions import Fraction
+from functools import cached_property
 from zoneinfo import ZoneInfo
 
 import numpy as np
@@ -32,17 +35,19 @@ from procgen.spec.units import (
     parse_date,
     parse_length,
     shown,
+    spelled,
 )
 from procgen.spec.zones import offsets
 
 LAST_YEAR = 9998  # one short of what a datetime can hold, for the ends of steps and for time zones
+LISTED = "where the times are listed"
 _NEEDS_TIME = "needs time: {start: …, every: …}; give them, or write a number of steps"
 _EPOCH = date(1970, 1, 1).toordinal()
 
 
 @dataclass(frozen=True)
 class Grid:
-    """The steps of a spec and, where `start` and `every` are given, when they are.
+    """The steps of a spec and, where `start` and `every` are given, or `at`, when they are.
 
     Parameters
     ----------
@@ -54,6 +59,8 @@ class Grid:
     stamp : "begin" or "end": which end of a step its stamp is.
     holidays : days that are not business days, beside Saturdays and Sundays.
     uneven : the length of the steps whose equal parts these are, where the parts have no calendar.
+    at : the times of steps 0, 1, … where they are listed: µs of UTC since 1970, two or more, each later than the one
+        before, and no fewer than `steps`; `start` is then the first of them, and `every` None.
     """
 
     steps: int
@@ -63,6 +70,7 @@ class Grid:
     stamp: str = "begin"
     holidays: tuple[date, ...] = ()
     uneven: str = ""  # the length of the steps that were cut into parts without a calendar
+    at: tuple[int, ...] = ()
 
     def cut(self, parts: int) -> Grid:
         """Return the grid of steps cut into so many equal parts; without a calendar where these are no whole ms.
@@ -70,6 +78,8 @@ class Grid:
         Days and weeks have equal parts only where no clock changes.
         """
         steps = self.steps * parts
+        if self.at:
+            return replace(self, steps=steps, start=None, uneven="listed steps", at=())
         if self.every is None:
             return replace(self, steps=steps)
         whole = self.every[1] in ABSOLUTE or (self.every[1] in DAYS and self.zone is None)
@@ -84,12 +94,14 @@ class Grid:
 
         Raises ValueError when the grid has no start.
         """
-        if self.start is None or self.every is None:
+        if self.start is None:
             raise ValueError("these steps have no stamps: the spec's time has no start")
         return self.moments(np.arange(first_step, first_step + count, dtype=np.int64))
 
     def moments(self, steps: np.ndarray) -> np.ndarray:
         """Return the stamps of any steps: int64, µs of UTC since 1970; needs a start."""
+        if self.at:
+            return self._listed(np.asarray(steps, np.int64))
         assert self.start is not None and self.every is not None
         steps = np.asarray(steps, np.int64) + (self.stamp == "end")
         if self.every[1] in ABSOLUTE:
@@ -105,7 +117,7 @@ class Grid:
     def even(self) -> bool:
         """Whether all steps are known to have one length; also where none is given."""
         if self.every is None:
-            return not self.uneven
+            return not self.uneven and not self.at
         return self.every[1] in ABSOLUTE or (self.every[1] in DAYS and self.zone is None)
 
     def local(self, steps: np.ndarray) -> np.ndarray:
@@ -113,12 +125,12 @@ class Grid:
 
         Raises ValueError when the grid has no start.
         """
-        if self.start is None or self.every is None:
+        if self.start is None:
             raise ValueError("these steps have no local time: the spec's time has no start")
         steps = np.asarray(steps, np.int64)
-        if self.every[1] not in ABSOLUTE:
+        if self.every is not None and self.every[1] not in ABSOLUTE:
             return self._local(steps)
-        utc = steps * self._length + self._utc(self.start)
+        utc = self._listed(steps) if self.at else steps * self._length + self._utc(self.start)
         return utc if self.zone is None else utc + offsets(self.zone, utc)
 
     def last_year(self) -> int:
@@ -126,15 +138,21 @@ class Grid:
         assert self.start is not None
         return int(self.start.year + Fraction(self.start.month - 1, 12) + Fraction(self.steps * self._length, YEAR))
 
-    def steps_per(self, unit: str) -> float:
+    def steps_per(self, unit: str, by_time: bool = False) -> float:
         """Return how many steps a unit such as `day` or `year` holds, on average; ValueError says why not.
 
-        A month is a twelfth of the Gregorian mean year of 365.2425 days, a business day 7/5 of a day.
+        A month is a twelfth of the Gregorian mean year of 365.2425 days, a business day 7/5 of a day. `by_time`: the
+        average is asked for by what counts by the time that passes, and so has it right also where times are listed.
         """
         count, name = parse_length(unit)
         if name == "step":
             return float(count)
-        if self.every is None:
+        if self.at and not by_time:
+            raise ValueError(
+                f"per: {unit} needs steps of one length, and {LISTED} (time.at) they may have any; write the value per "
+                "step, or use ornstein_uhlenbeck with clock: time, which goes by the time that passes"
+            )
+        if self.every is None and not self.at:
             need = f"needs the length of a step; {self._lack('every: 1h, …')}, or write per: step"
             raise ValueError(f"per: {unit} {need}")
         return float(count * LENGTH[name] / self._length)
@@ -148,6 +166,11 @@ class Grid:
         count, unit = parse_length(text)
         if unit == "step":
             return float(count)
+        if self.at:
+            raise ValueError(
+                f"{_article(unit)} is no fixed number of steps {LISTED} (time.at); write a number of steps, or use "
+                "calendar, which goes by the hour, the weekday or the month"
+            )
         if self.every is None:
             need = f"needs the length of a step; {self._lack('every: 1h, …')}, or write a number of steps"
             raise ValueError(f"{shown(text)} {need}")
@@ -167,11 +190,11 @@ class Grid:
                 "expected a number of steps, a clock time such as 18:00, or a date such as 2027-01-04T06:00, "
                 f"got {shown(text)}"
             )
-        if self.start is None or self.every is None:
+        if self.start is None:
             need = f"needs the steps' times; {self._lack('start: …, every: …')}, or write a number of steps"
             raise ValueError(f"{shown(text)} {need if self.uneven else _NEEDS_TIME}")
         if clock is not None:
-            if _family(self.every[1]) != "day":
+            if self.every is not None and _family(self.every[1]) != "day":
                 raise ValueError(f"a clock time is no point in steps of {self._every}; write a number of steps")
             moment = datetime.combine(self.start.date(), clock)
         assert moment is not None
@@ -192,6 +215,14 @@ class Grid:
         """Return whether the change of clocks skips a local time."""
         return self._offset(moment, 1) > self._offset(moment, 0)
 
+    def twice(self, moment: datetime) -> bool:
+        """Return whether a local time happens twice, as clocks are set back."""
+        return self._offset(moment, 1) < self._offset(moment, 0)
+
+    def instant(self, moment: datetime) -> int:
+        """Return a local time, without a time zone, as µs of UTC since 1970; the first of two."""
+        return self._utc(moment)
+
     def _lack(self, keys: str) -> str:
         """Return how to mend a lack of dates."""
         if self.uneven:
@@ -200,13 +231,29 @@ class Grid:
 
     @property
     def _length(self) -> int:
+        if self.at:
+            return max(1, round(Fraction(self.at[-1] - self.at[0], len(self.at) - 1)))
         assert self.every is not None
         return self.every[0] * LENGTH[self.every[1]]
+
+    @property
+    def length(self) -> str:
+        """The length of a step in words, such as "1 business day"; on average where times are listed."""
+        return spelled(self._length) if self.at else self._every
 
     @property
     def _every(self) -> str:
         assert self.every is not None
         return f"{self.every[0]} {self.every[1]}"
+
+    @cached_property
+    def _times(self) -> np.ndarray:
+        return np.array(self.at, np.int64)
+
+    def _listed(self, steps: np.ndarray) -> np.ndarray:
+        """Return UTC of steps whose times are listed; of others by the mean length."""
+        inside = np.clip(steps, 0, len(self.at) - 1)
+        return self._times[inside] + (steps - inside) * self._length
 
     def _offset(self, moment: datetime, fold: int | None = None) -> int:
         """Return the zone's offset from UTC at a local time, in microseconds."""
@@ -246,6 +293,8 @@ class Grid:
         return days * DAY + _microseconds(self.start) % DAY
 
     def _position(self, moment: datetime) -> float:
+        if self.at:
+            return self._among(self._utc(moment))
         assert self.start is not None and self.every is not None
         unit = self.every[1]
         if unit in ABSOLUTE:
@@ -258,6 +307,15 @@ class Grid:
         at = int(np.searchsorted(stamps, _microseconds(moment), side="right")) - 1
         gone = Fraction(_microseconds(moment) - int(stamps[at]), int(stamps[at + 1] - stamps[at]))
         return float(int(near[at]) + gone)
+
+    def _among(self, utc: int) -> float:
+        """Return an instant in steps from step 0, where times are listed."""
+        last = len(self.at) - 1
+        if not self.at[0] <= utc < self.at[last]:
+            end = 0 if utc < self.at[0] else last
+            return float(end + Fraction(utc - self.at[end], self._length))
+        before = int(np.searchsorted(self._times, utc, side="right")) - 1
+        return float(before + Fraction(utc - self.at[before], self.at[before + 1] - self.at[before]))
 
     def _business_steps(self, moment: datetime) -> np.ndarray:
         assert self.start is not None and self.every is not None

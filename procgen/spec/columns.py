@@ -245,6 +245,12 @@ def _steps(
         reader.fault(tree.value["time"], "times need time: {start: …, every: …}; give them, or match by step")
         return None
     span = np.arange(-len(values) - back, min(grid.steps, MOST_VALUES) + len(values))
+    if grid.at:  # no other times are known
+        if back:
+            why = "where the times of steps are listed (time.at), those before step 0 are not among them"
+            reader.fault(tree.value["time"], f"{why}; match by step, as in {{…, step: COLUMN}}, up to step −1")
+            return None
+        span = np.arange(len(grid.at))
     stamps, clocks = grid.stamps(int(span[0]), len(span)).tolist(), grid.local(span + (grid.stamp == "end")).tolist()
     by_utc = dict(zip(stamps, span.tolist(), strict=True))
     by_clock = dict(zip(clocks[::-1], span.tolist()[::-1], strict=True))  # of two that happen twice, the first
@@ -259,7 +265,8 @@ def _steps(
         if micro not in known and micro <= ends[-1]:
             none = f"no step is at {value}; take that row out ({table.rows[i]}), or change the spec's time"
             old = f"{value} ({table.rows[i]}) lies more than {-span[0]:,} steps before step 0; take out older rows"
-            reader.fault(tree.value["file"], none if micro > ends[0] else f"{old}, or change the spec's start")
+            near = micro > ends[0] or grid.at
+            reader.fault(tree.value["file"], none if near else f"{old}, or change the spec's start")
             return None
         steps.append(known.get(micro))
     return steps

@@ -73,6 +73,7 @@ class Parameter:
     unit : "series" (the unit of the series), "1", "steps", "1/step", ...
     per : "rate" (scales with the length of a step), "diffusion" (with its square root), or None. With either,
         `{value: v, per: day}` is read, and the value is converted to one step of the grid.
+    by_time : the term can go by the time that passes, so that `per` is right also where times are listed.
     no_per : why `per` makes no sense here, as a full clause, when the general reason is not enough.
     """
 
@@ -84,6 +85,7 @@ class Parameter:
     unit: str = "1"
     per: str | None = None
     no_per: str | None = None
+    by_time: bool = False
 
     @property
     def required(self) -> bool:
@@ -113,7 +115,7 @@ class Parameter:
         if reader.grid is None or value is INVALID:  # the grid's own fault is already reported
             return INVALID
         try:
-            steps = reader.grid.steps_per(unit.value)
+            steps = reader.grid.steps_per(unit.value, self.by_time)
         except ValueError as error:
             reader.fault(unit, str(error))
             return INVALID

@@ -20,9 +20,8 @@ class Elapsed:
 
     @property
     def every(self) -> str:
-        """The length of a step in words, such as "1 business day"."""
-        assert self.grid.every is not None
-        return f"{self.grid.every[0]} {self.grid.every[1]}"
+        """The mean length of a step in words, such as "1 business day"."""
+        return self.grid.length
 
     def lengths(self, steps: np.ndarray) -> np.ndarray:
         """The time from the step before to each step, in steps of the mean length: float64, at least 0."""
@@ -45,7 +44,8 @@ class Elapsed:
 class Clock(Choice):
     """Whether all steps count alike (`steps`) or by their length (`time`); read as `steps`, or an Elapsed.
 
-    Where all steps have one length, both are the same, and are read alike.
+    Where all steps have one length, both are the same, and are read alike. Where times are listed, `time` is the
+    default: who lists times means them.
     """
 
     def __init__(self) -> None:
@@ -53,8 +53,13 @@ class Clock(Choice):
 
     def read(self, tree: Tree, reader: Reading) -> Any:
         word = super().read(tree, reader)
-        if word != "time":
-            return word
+        return self._of(tree, reader) if word == "time" else word
+
+    def default(self, value: Any, reader: Reading) -> Any:
+        grid = reader.grid
+        return _elapsed(grid) if grid is not None and grid.at else value
+
+    def _of(self, tree: Tree, reader: Reading) -> Any:
         grid = reader.grid
         if grid is None:  # the fault of `time` is already reported
             return INVALID
@@ -64,5 +69,9 @@ class Clock(Choice):
             need = "needs time: {start: …, every: …}; give them, or leave clock out"
             reader.fault(tree, f"the time between steps {need}")
             return INVALID
-        # How many steps there are is no part of how long one is: with it, a longer spec would be another one.
-        return Elapsed(replace(grid, steps=1))
+        return _elapsed(grid)
+
+
+def _elapsed(grid: Grid) -> Elapsed:
+    # How many steps there are is no part of how long one is: with it, a longer spec would be another one.
+    return Elapsed(replace(grid, steps=1))

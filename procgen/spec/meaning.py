@@ -6,10 +6,13 @@ the same. Terms are found by their labels. Titles and notes mean nothing.
 
 from __future__ import annotations
 
+import hashlib
 from collections import Counter
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, fields
 from typing import Any
+
+import numpy as np
 
 from procgen.spec.entries import children, named, walk
 from procgen.spec.model import Entry, Series, Shared, Spec
@@ -91,11 +94,21 @@ def _head(spec: Spec) -> Facts:
     written = spec.raw.get("time", {})
     for one in fields(spec.time):
         value = getattr(spec.time, one.name)
+        if spec.time.at and one.name in ("start", "at"):  # the start is the first of them
+            facts["time.at"] = _Fact(spec.time.at, _times(spec.time.at))
+            continue
         facts[f"time.{one.name}"] = _Fact(value, shown(written.get(one.name, value if value != () else None)))
     raw = spec.raw.get("parameters", {})
     for name, varying in spec.parameters.items():
         facts[f"parameters.{name}"] = _Fact(varying, shown(raw[name]) if name in raw else str(varying))
     return facts
+
+
+def _times(at: tuple[int, ...]) -> str:
+    """Return listed times in words, with a digest of all of them."""
+    first, last = (f"{np.datetime64(time, 'us').item().isoformat()}Z" for time in (at[0], at[-1]))
+    digest = hashlib.sha256(np.array(at, "<i8").tobytes()).hexdigest()[:8]
+    return f"{len(at):,} times from {first} to {last} (digest {digest}…)"
 
 
 def _owners(section: str, old: Spec, new: Spec) -> Iterator[Change]:

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from datetime import date, datetime
+from dataclasses import replace
+from datetime import date, datetime, timedelta
 from typing import Any
 from zoneinfo import ZoneInfo, available_timezones
 
@@ -10,6 +11,7 @@ import numpy as np
 
 from procgen.spec.calendar import LAST_YEAR, Grid
 from procgen.spec.declare import INVALID, Choice, Domain, Parameter, Reading, Schema, Whole, one_or_list, read_each
+from procgen.spec.timelist import TimeList, listed
 from procgen.spec.tree import Tree
 from procgen.spec.units import parse_date, parse_length
 from procgen.spec.words import did_you_mean
@@ -96,7 +98,8 @@ TIME = (
     Parameter("steps", "T", Whole(at_least=1, at_most=MOST), "number of steps"),
     Parameter("start", "", Date(), "local date and time at which step 0 begins; of two, the first", default=None),
     Parameter("every", "", Every(), "length of a step", default=None),
-    Parameter("zone", "", Zone(), "time zone of the start; UTC when absent", default=None),
+    Parameter("at", "", TimeList(), "times of all steps, instead of start and every (and of steps)", default=None),
+    Parameter("zone", "", Zone(), "time zone of start or at; UTC when absent", default=None),
     Parameter("stamp", "", Choice("begin", "end"), "which end of a step its time is", default="begin"),
     Parameter("holidays", "", Dates(), "days that are no business days, beside weekends", default=()),
 )
@@ -105,12 +108,17 @@ TIME = (
 def read_time(tree: Tree, reader: Reading) -> Grid | None:
     """Return the grid of a spec, or None after reporting every fault."""
     before = len(reader.faults)
-    values = read_each(tree, TIME, reader)
-    if tree.is_map:
+    by_list = tree.is_map and "at" in tree.value
+    values = read_each(tree, TIME, reader, optional=("steps",) if by_list else ())
+    if by_list:
+        _alone(tree, reader)
+    elif tree.is_map:
         _companions(tree, values, reader)
     if len(reader.faults) > before:
         return None
-    grid = Grid(**{**values, "start": None})
+    if by_list:
+        return _listed(tree, values, reader)
+    grid = Grid(**{**values, "start": None, "at": ()})
     if values["start"] is None:
         return grid
     return _start(tree, grid, values["start"], reader)
@@ -128,6 +136,27 @@ def _companions(tree: Tree, values: dict[str, Any], reader: Reading) -> None:
     if "holidays" in given and every is not INVALID and (every is None or every[1] != "business day"):
         message = "holidays count only on steps of business days; write every: 1 business day, or remove them"
         reader.fault(tree.key("holidays"), message)
+
+
+def _alone(tree: Tree, reader: Reading) -> None:
+    """Report keys that have no place beside listed times."""
+    for key in ("start", "every", "stamp", "holidays"):
+        if key in tree.value:
+            message = f"{key} has no place beside at, which lists the time of every step; remove {key}, or at"
+            reader.fault(tree.value[key] if key == "start" else tree.key(key), message)
+
+
+def _listed(tree: Tree, values: dict[str, Any], reader: Reading) -> Grid | None:
+    at, steps = listed(values["at"], values["zone"], reader), values["steps"]
+    if at is None:
+        return None
+    if steps is not None and steps > len(at):
+        message = f"expected at most {len(at):,} steps, for so many times are listed in at, got {steps:,}"
+        reader.fault(tree.value["steps"], f"{message}; list more times, or ask for fewer steps")
+        return None
+    grid = Grid(steps or len(at), datetime(1970, 1, 1), zone=values["zone"], at=at)
+    first = int(grid.local(np.zeros(1, np.int64))[0])
+    return replace(grid, start=datetime(1970, 1, 1) + timedelta(microseconds=first))
 
 
 def _start(tree: Tree, grid: Grid, moment: datetime, reader: Reading) -> Grid | None:

@@ -108,6 +108,16 @@ def _offset(text: str | None) -> timezone | None:
     return timezone(timedelta(minutes=sign * min(minutes, 1439)))
 
 
+def spelled(microseconds: int) -> str:
+    """Return a length of time in the largest unit, up to days, that it is a whole number of, or else holds at all."""
+    units = ("day", "h", "min", "s", "ms")
+    whole = next((unit for unit in units if microseconds % LENGTH[unit] == 0), None)
+    unit = whole or next((unit for unit in units if microseconds >= LENGTH[unit]), "ms")
+    count = microseconds / LENGTH[unit]
+    number = f"{count:,.0f}" if whole else f"{count:.4g}"
+    return f"{number} {unit}{'s' if unit == 'day' and count != 1 else ''}"
+
+
 def shown(text: str) -> str:
     """Return a text in quotes, shortened, for a message."""
     return f'"{text[:40]}…"' if len(text) > 40 else f'"{text}"'

@@ -80,19 +80,27 @@ class OrnsteinUhlenbeck(Integrated):
             "speed of the pull: half of a distance is left after ln 2/κ",
             unit="1/step",
             per="rate",
+            by_time=True,
         ),
         Parameter(
             "clock",
             "",
             Clock(),
             "whether all steps count alike, or by the time that passes: over weekends, in months of 28 to 31 days, on "
-            "days when clocks change; with `time`, numbers without `per` are for a step of the mean length, which is "
-            "also that of the steps before step 0",
+            "days when clocks change, between listed times (where `time` is the default); with `time`, numbers without "
+            "`per` are for a step of the mean length, which is also that of the steps before step 0",
             default="steps",
         ),
         Parameter("mean", "m", Real(), "where it is pulled to", default=0.0, unit="series"),
         Parameter(
-            "sd", "σ", Real(above=0), "volatility of the diffusion", default=None, unit="series", per="diffusion"
+            "sd",
+            "σ",
+            Real(above=0),
+            "volatility of the diffusion",
+            default=None,
+            unit="series",
+            per="diffusion",
+            by_time=True,
         ),
         TOTAL_SD,
         LAW,

@@ -282,10 +282,10 @@ def test_times():
 @pytest.mark.parametrize(
     ("time", "message", "place"),
     [
-        ("5", "expected a mapping with the keys steps, start, every, zone, stamp, holidays, got 5", "time:7"),
+        ("5", "expected a mapping with the keys steps, start, every, at, zone, stamp, holidays, got 5", "time:7"),
         ("{}", "expected the key steps (number of steps: a whole number in [1, 1e+12])", "time:7"),
         ("{steps: 0}", "expected a whole number in [1, 1e+12], got 0 (steps: number of steps)", "time.steps:15"),
-        ("{step: 5}", "unknown key step; expected one of steps, start, every, zone, stamp, holidays; did you mean "
+        ("{step: 5}", "unknown key step; expected one of steps, start, every, at, zone, stamp, holidays; did you mean "
          "steps?",
          "time.step:8"),
         ("{steps: 5, every: 15}", "expected a length of time such as 15min, 1h, 1d, 1 week, 1 month, 1 quarter, 1 year "
@@ -309,13 +309,13 @@ def test_times():
         ("{steps: 5, stamp: end}", "stamp means nothing without start; give start, or remove stamp", "time.stamp:18"),
         ("{steps: 5, every: 1d, start: 2027-01-04, zone: Europe/Berlni}", "expected a time zone such as "
          "Europe/Berlin or "
-         'UTC, got "Europe/Berlni"; did you mean Europe/Berlin? (zone: time zone of the start; UTC when absent)',
+         'UTC, got "Europe/Berlni"; did you mean Europe/Berlin? (zone: time zone of start or at; UTC when absent)',
          "time.zone:54"),
         ("{steps: 5, every: 1d, start: 2027-01-04, zone: ../../etc/passwd}", "expected a time zone such as "
          "Europe/Berlin "
-         'or UTC, got "../../etc/passwd" (zone: time zone of the start; UTC when absent)', "time.zone:54"),
+         'or UTC, got "../../etc/passwd" (zone: time zone of start or at; UTC when absent)', "time.zone:54"),
         ("{steps: 5, every: 1d, start: 2027-01-04, zone: Europe}", "expected a time zone such as Europe/Berlin or UTC, "
-         'got "Europe"; did you mean Europe/Rome? (zone: time zone of the start; UTC when absent)', "time.zone:54"),
+         'got "Europe"; did you mean Europe/Rome? (zone: time zone of start or at; UTC when absent)', "time.zone:54"),
         ("{steps: 5, every: 1h, start: 2027-03-28T02:30, zone: Europe/Berlin}", "2027-03-28T02:30 does not exist in "
          "Europe/Berlin: the clocks skip it; choose a time before or after", "time.start:36"),
         ("{steps: 5, every: 1h, start: 2027-03-28T12:00+01:00, zone: Europe/Berlin}", "2027-03-28T12:00:00+01:00 "
