@@ -16,11 +16,12 @@ from numpy.typing import NDArray
 
 from procgen.checks.verdict import Check
 from procgen.checks.words import number
-from procgen.terms.combine import Exp, Hidden, Product, Scaled, Sum
+from procgen.terms.combine import Exp, Product, Scaled, Sum
 from procgen.terms.gaps import Missing
 from procgen.terms.level import Constant
 from procgen.terms.shape import Elementwise
 from procgen.terms.support import EVERYTHING, INF, Support, finite, near
+from procgen.terms.supports import common_support
 from procgen.terms.window import Hold
 
 POSSIBLE, HELD = "possible values", "held values"
@@ -137,7 +138,7 @@ def words(support: Support) -> str:
 def possible_of(graph: Any, name: str, declared: Any, vanishes: bool = False) -> Possible:
     """What a series of a graph can give, as its declaration stores it; 0, too, where what is above it `vanishes`."""
     closeness = _NEAR.get(declared.type, _DOUBLE)
-    support = stored(_common(graph, name), declared)
+    support = stored(common_support(graph, name), declared)
     support = replace(support, above=support.above and not vanishes)
     every, first = held(graph.series[name]) or (1, 0)
     if graph.varied is not None and graph.varied.parameters:
@@ -149,47 +150,6 @@ def vanishes(theory: Any, steps: int) -> bool:
     """Whether a series comes so near to 0 that a number above it may be stored as 0."""
     mean = theory.mean(np.array([0, steps - 1]))
     return mean is not None and float(np.min(np.abs(mean))) < _TINY
-
-
-def _common(graph: Any, name: str) -> Support:
-    """The support of a series, if parameters that are drawn by path leave it as it is."""
-    from procgen.spec.model import SpecError
-    from procgen.terms.graph import Graph
-
-    support = support_of(graph.series[name])
-    if graph.varied is None or not graph.varied.parameters or support.everything:
-        return support
-    for rank in (0.1, 0.9):
-        try:
-            values = {key: _at(one.varying.law, rank) for key, one in graph.varied.parameters.items()}
-            other = Graph(graph.varied.at(values))
-        except SpecError:
-            return EVERYTHING
-        if support_of(other.series[name]) != support:
-            return EVERYTHING
-    return support
-
-
-def _at(law: Any, rank: float) -> float:
-    from procgen.chance import draws
-    from procgen.spec.draws import TableDraw
-
-    if isinstance(law, TableDraw):
-        return sorted(law.numbers)[int(rank * len(law.numbers))]
-    return float(draws.values(law, np.array([rank]))[0])
-
-
-def support_of(node: Any, known: dict[int, Support] | None = None) -> Support:
-    """The values that a node can give."""
-    known = {} if known is None else known
-    if id(node) not in known:
-        if not hasattr(node, "term"):
-            known[id(node)] = EVERYTHING  # a primary stream
-        elif isinstance(node.term, Hidden):
-            known[id(node)] = node.inputs[0].term.support_of(node.term.output)
-        else:
-            known[id(node)] = node.term.support(*(support_of(part, known) for part in node.inputs))
-    return known[id(node)]
 
 
 def stored(support: Support, declared: Any) -> Support:

@@ -142,8 +142,9 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
         random = th[name].random
         reach = Reach(th[name], grain, steps) if random else None
         possible = possible_of(graph, name, declared, vanishes(th[name], steps)) if random else Possible()
+        kind = column_type(graph, name)
         precision.append(
-            Precision(name, column_type(graph, name), declared.decimals, random, lumpy(th[name]), reach, possible=possible)
+            Precision(name, kind, declared.decimals, random, lumpy(th[name]), reach, possible=possible)
         )
         precision[-1].repeats = (
             repeats_of(plan, way, graph, lumpy(th[name]), spec.paths * steps) if random else None

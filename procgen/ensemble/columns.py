@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import asdict, dataclass
+from collections.abc import Iterable, Mapping
+from dataclasses import asdict, dataclass, field, replace
 from typing import Any
 
 import numpy as np
@@ -11,6 +12,7 @@ from procgen.ensemble.errors import EnsembleError
 
 TYPES = {"float64": 8, "float32": 4, "int64": 8}
 EXACT = 2.0**52  # from here on a float64 has no fraction
+WHOLE = 2.0**53  # beyond it a float64 leaves whole numbers out
 
 
 @dataclass(frozen=True)
@@ -23,6 +25,7 @@ class Column:
     unit: str | None = None
     revealed: bool = False
     gaps: bool = False  # whether values may be missing: NaN in arrays, null in files
+    counted: bool = field(default=False, compare=False)  # int64 for its values, not by its spec
 
     @property
     def exact(self) -> bool:
@@ -30,8 +33,20 @@ class Column:
         return self.type == "float64" and self.decimals is None
 
     def json(self) -> dict[str, Any]:
-        told = asdict(self)
-        return told if self.gaps else {key: value for key, value in told.items() if key != "gaps"}
+        return {key: value for key, value in asdict(self).items() if key != "counted" and (key != "gaps" or value)}
+
+
+def as_kept(columns: Iterable[Column], types: Mapping[str, str]) -> list[Column]:
+    """Columns as an ensemble has them whose columns are of these `types`.
+
+    One that was drawn before counts became int64 has them as float64, and goes on with that.
+    """
+    return [
+        replace(column, type="float64", counted=False)
+        if column.counted and types.get(column.name) == "float64"
+        else column
+        for column in columns
+    ]
 
 
 def store(values: np.ndarray, column: Column) -> np.ndarray:
@@ -48,6 +63,8 @@ def store(values: np.ndarray, column: Column) -> np.ndarray:
         return values
     kept = values if column.decimals is None else _rounded(values, column.decimals)
     if column.type == "int64":
+        if column.counted:
+            _refuse_damage(kept, column)
         kept = np.rint(kept)
         _refuse(np.abs(kept) >= 2.0**63, kept, column)
         return kept.astype(np.int64)
@@ -70,6 +87,16 @@ def _rounded(values: np.ndarray, decimals: int) -> np.ndarray:
     if whole is not None and whole.any():
         scaled[whole] = values[whole]
     return scaled
+
+
+def _refuse_damage(values: np.ndarray, column: Column) -> None:
+    """EnsembleError unless all are whole numbers that int64 and float64 both have."""
+    bad = (np.abs(values) > WHOLE) | (np.rint(values) != values)
+    if bad.any():
+        raise EnsembleError(
+            f"series {column.name} is stored as int64, as whole numbers are, and the value {float(values[bad][0])!r} "
+            "is not a whole number of at most 2^53 in size; write type: float64 for it in the spec"
+        )
 
 
 def _refuse(bad: np.ndarray, values: np.ndarray, column: Column) -> None:

@@ -11,7 +11,7 @@ from typing import Any
 from procgen.chance.streams import STREAM_VERSION
 from procgen.ensemble import engines, manifest, revealed
 from procgen.ensemble.cluster import opened
-from procgen.ensemble.columns import TYPES, store
+from procgen.ensemble.columns import TYPES, as_kept, store
 from procgen.ensemble.draw import Drawer, empty
 from procgen.ensemble.engines import Engine, Progress, Work
 from procgen.ensemble.ensemble import Ensemble, Memory, OnDisk
@@ -174,7 +174,7 @@ class Job:
     factory: str
 
     def __post_init__(self) -> None:
-        self.columns = self.source.columns
+        self.columns = [*self.source.columns]
         self.identity = {
             "spec": self.spec.digest(),
             "seed": self.spec.seed,
@@ -213,12 +213,13 @@ class Job:
             engine.check_sees(str(self.folder.state.absolute()))
         if overwrite:
             self.present.remove()
+        self.columns = as_kept(self.columns, {} if overwrite else self.present.types())
         plan = self.present.chains(resume) or chains(
             self.whole, row_bytes(self.columns), engine.size, self.layout.widest
         )
         there = self.present.records(plan)
         self.folder.clean_state(keep_plan=True)
-        self.present.write_plan(plan)
+        self.present.write_plan(plan, self.columns)
         self.folder.remove([MANIFEST])
 
         tasks, records = [], []
@@ -238,8 +239,8 @@ class Job:
         return made
 
     def _task(self, chain: Chain, start: int) -> Task:
-        out = address(self.folder.path)
-        return Task(self.spec.raw, self.identity, out, self.whole, chain, start, self.reveal, self.factory)
+        out, types = address(self.folder.path), {column.name: column.type for column in self.columns}
+        return Task(self.spec.raw, self.identity, out, self.whole, chain, start, self.reveal, self.factory, types)
 
     def _refuse_too_large(self) -> None:
         """Refuse what the disk cannot hold, before the parts are even planned."""

@@ -7,13 +7,13 @@ it anywhere. Running it twice, even at once, gives the same files.
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import asdict, dataclass
+from dataclasses import asdict, dataclass, field
 from typing import Any
 
 import numpy as np
 
 from procgen.ensemble import digest
-from procgen.ensemble.columns import Column, store
+from procgen.ensemble.columns import Column, as_kept, store
 from procgen.ensemble.draw import Drawer, Tick, empty
 from procgen.ensemble.files import writing
 from procgen.ensemble.layouts import Layout
@@ -35,6 +35,7 @@ class Task:
     start: int = 0  # parts before this one are there already
     reveal: tuple[str, ...] = ()
     factory: str = FACTORY
+    types: Mapping[str, str] = field(default_factory=dict)  # of the columns that are there already, by name
 
     def json(self) -> dict[str, Any]:
         """The task as data; what tasks have in common is shared, not copied."""
@@ -97,7 +98,8 @@ def _pass_over(task: Task, part: Block, source: Source, drawer: Drawer) -> None:
 
 
 def _render_part(task: Task, part: Block, source: Source, drawer: Drawer, folder: Folder) -> dict[str, Any]:
-    name, columns, layout = part.file(task.whole), source.columns, Layout.of(task.identity)
+    name, layout = part.file(task.whole), Layout.of(task.identity)
+    columns = as_kept(source.columns, task.types)
     last = part.end_step == task.whole.end_step
     digests = Digests(part, columns)
     buffers: dict[str, np.ndarray] = {}

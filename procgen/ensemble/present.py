@@ -78,12 +78,22 @@ class Present:
             raise EnsembleError(f"{self.folder.path / PLAN} is damaged; begin again with --overwrite") from None
         return _chains(blocks)
 
-    def write_plan(self, chains: Sequence[Chain]) -> None:
+    def write_plan(self, chains: Sequence[Chain], columns: Sequence[Column]) -> None:
         parts = [part for chain in chains for part in chain]
         blocks = [(part.first_path, part.paths, part.first_step, part.steps) for part in parts]
         names = [file for part in parts for file in self._files(part)]
-        self.folder.write_json(PLAN, {"identity": self.identity, "files": names, "parts": blocks})
+        types = {column.name: column.type for column in columns}
+        self.folder.write_json(PLAN, {"identity": self.identity, "types": types, "files": names, "parts": blocks})
         self.folder.begun = True
+
+    def types(self) -> dict[str, str]:
+        """The types of the columns that are there, by name; {} when nothing is."""
+        found, plan = self._manifest(), self.folder.read_json(PLAN)
+        if found is not None:
+            return {column.name: column.type for column in found.columns}
+        if plan is None:
+            return {}
+        return plan.get("types", {column.name: "float64" for column in self.columns})  # what all were, untold
 
     def records(self, chains: Sequence[Chain]) -> dict[Block, dict[str, Any]]:
         """Records of the parts that are there, whole, and of this render."""

@@ -8,6 +8,7 @@ from collections.abc import Iterator, Mapping
 from typing import TYPE_CHECKING, Any
 
 from procgen.chance.streams import STREAM_VERSION
+from procgen.ensemble.columns import as_kept
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.source import FACTORY, open_source
 
@@ -68,7 +69,7 @@ def contradictions(manifest: Manifest, factory: str = FACTORY) -> list[str]:
         found.append("spec.canonical is not what spec.raw means")
     if spec.seed != identity.get("seed"):
         found.append(f"identity.seed is {identity.get('seed')}, and the seed of its spec is {spec.seed}")
-    if tuple(source.columns) != tuple(manifest.columns):
+    if as_kept(source.columns, {column.name: column.type for column in manifest.columns}) != [*manifest.columns]:
         found.append("its columns are not those of its spec")
     return found
 

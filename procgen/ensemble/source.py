@@ -42,6 +42,7 @@ class SpecSource:
     def __init__(self, spec: Any, reveal: tuple[str, ...] = ()):
         from procgen.terms.by_path import deepest
         from procgen.terms.graph import build
+        from procgen.terms.supports import column_type, counted
 
         self.spec, self.reveal = spec, reveal
         self.graph = build(spec)
@@ -54,7 +55,15 @@ class SpecSource:
             if name in spec.series:
                 raise EnsembleError(f"cannot reveal: {name} is a series, which is written anyway; give {name}.LABEL")
         self.columns = [
-            Column(s.name, s.type, s.decimals, s.unit, gaps=self.graph.gappy(s.name)) for s in spec.series.values()
+            Column(
+                s.name,
+                column_type(self.graph, s.name),
+                s.decimals,
+                s.unit,
+                gaps=self.graph.gappy(s.name),
+                counted=counted(self.graph, s.name),
+            )
+            for s in spec.series.values()
         ]
         self.columns += [Column(name, revealed=True, gaps=self.graph.gappy(name)) for name in reveal]
         self.stamps = spec.time.stamps if spec.time.start is not None else None

@@ -103,7 +103,7 @@ class Series:
     name: str
     of: tuple[Entry, ...]
     unit: str | None
-    type: str  # "float64", "float32" or "int64"
+    type: str | None  # "float64", "float32" or "int64"; None: as its values are (`terms.supports`)
     decimals: int | None
     stream: str
     note: str | None

@@ -11,8 +11,8 @@ from typing import Any
 from procgen.spec.calendar import Grid
 from procgen.spec.columns import Past
 from procgen.spec.correlated import read_correlation
-from procgen.spec.declare import INVALID, Body, Choice, Parameter, Real, Text, Whole, read_each
-from procgen.spec.entries import SERIES_KEYS, read_body, read_name
+from procgen.spec.declare import INVALID, Body, Parameter, Real, Text, Whole, read_each
+from procgen.spec.entries import SERIES_KEYS, TYPE, read_body, read_name
 from procgen.spec.file import text_of
 from procgen.spec.groups import OWN, read_groups
 from procgen.spec.links import Links
@@ -39,7 +39,7 @@ SECTIONS = ("time", "reuse", "parameters", "shared", "series", "groups", "correl
 SERIES = (
     Parameter("of", "", Body(), "the terms of the series"),
     Parameter("unit", "", Text(), "unit of the values, kept in the metadata of the column", default=None),
-    Parameter("type", "", Choice("float64", "float32", "int64"), "type of the column", default="float64"),
+    TYPE,
     Parameter("decimals", "", Whole(at_least=0, at_most=15), "decimals to round to", default=None),
     Parameter("stream", "", Text(), "name its draws are found by; its own when absent", default=None),
     Parameter("note", "", Text(), "free text", default=None),
@@ -342,7 +342,7 @@ def _shared(name: str, tree: Tree, reader: Reader) -> Shared:
 
 def _series(name: str, tree: Tree, reader: Reader) -> Series:
     if not _has_attributes(tree, reader):
-        return Series(name, read_body(tree, reader), None, "float64", None, name, None, tree.place)
+        return Series(name, read_body(tree, reader), None, None, None, name, None, tree.place)
     values = read_each(tree, SERIES, reader)
     stream = read_name(tree.value["stream"], reader, name) if values["stream"] not in (None, INVALID) else name
     if values["type"] == "int64" and values["decimals"]:

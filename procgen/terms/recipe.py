@@ -82,7 +82,7 @@ class _Kitchen:
 
     def recipe(self, name: str) -> Recipe:
         series = self.spec.series[name]
-        parts: list[Part] = [(f"{name} as stored", (series.type, series.decimals))]
+        parts: list[Part] = [(f"{name} as stored", (series.type or "float64", series.decimals))]
         self._body(name, parts, {id(self.bodies[name]): 0})
         draws = {part[1][-1] for part in parts if isinstance(part[1], tuple) and len(part[1]) == _SIZE}
         return Recipe(tuple(parts), frozenset(address for address in draws if address is not None))
