@@ -50,14 +50,16 @@ SHAPES = [(200, 1), (50, 7), (30, 300), (0, 4), (40, 0)]
 
 
 def both(function, make):
-    """Arguments and results of the plain and the compiled form."""
+    """Arguments and results of the plain and the compiled form; those of all paths abreast are as these."""
     found = []
-    for form in (function.plain, function.compiled):
+    for form in (function.plain, function.compiled, function.abreast):
         arguments = make()
         result = form(*arguments)
         rows = result if isinstance(result, tuple) else () if result is None else (result,)
         found.append([value for value in (*arguments, *rows) if isinstance(value, np.ndarray)])
-    return found
+    for one, other in zip(*found[1:], strict=True):
+        assert np.array_equal(one, np.broadcast_to(other, one.shape))
+    return found[:2]
 
 
 def check_same(plain, compiled, lanes):
@@ -128,12 +130,67 @@ def test_compiling_is_asked_for_and_ends(monkeypatch):
     assert calls == [garch]
 
 
-def test_wide_tiles_stay_with_numpy(monkeypatch):
-    """Where rows are long, NumPy's are the faster form; the values are the same anyway."""
+def test_wide_tiles_go_abreast(monkeypatch):
+    """Many paths are taken together at each step; the values are the same anyway."""
+    calls = []
     monkeypatch.setattr(room.Kernel, "compiled", None)
+    monkeypatch.setattr(room.Kernel, "plain", None, raising=False)
+    monkeypatch.setattr(room.Kernel, "abreast", lambda self, *args: calls.append(self))
     z = np.zeros((3, 2000))
     with compiling():
         garch(z, z.copy(), np.ones(2000), 0.1, 0.1, 0.8)
+    assert calls == [garch]
+
+
+def abreast_forms(function):
+    return [form for kinds, form in function._drivers.items() if kinds[0] == "abreast"]
+
+
+def test_many_coefficients_stay_with_numpy():
+    """Loops that cannot be unrolled are slower abreast than NumPy's rows."""
+    own = kernel(filtered.plain)
+    a = RNG.standard_normal((40, 7))
+    for phi, made in ((np.full(8, 0.1), True), (np.full(9, 0.1), False)):
+        check_same(*both(own, lambda phi=phi: (phi, np.zeros((40 + len(phi), 7)), a)), 7)
+        assert (abreast_forms(own)[-1] is not None) is made
+
+
+@kernel
+def led(z, weight, out):
+    """Numbers by step, the same for all paths."""
+    for t in range(z.shape[0]):
+        out[t] = weight[t] * z[t]
+
+
+def test_numbers_by_step_are_no_coefficients():
+    """Tiles of any length are drawn by the same compiled form."""
+    for steps in (3, 20):
+        z = RNG.standard_normal((steps, 5))
+        check_same(*both(led, lambda z=z: (z, z[:, 0].copy(), np.empty_like(z))), 5)
+    (form,) = abreast_forms(led)
+    assert form is not None
+
+
+@kernel
+def nested(z, weights, m, s, out, state):
+    """A row and a tile of states that move on, loops within the loop, a choice, a whole number."""
+    for t in range(z.shape[0]):
+        after = 0.0 * s
+        for j in range(m):
+            if weights[j] != 0.0:
+                after = after + weights[j] * (z[t] >= state[j])
+            state[j] = np.where(z[t] > 0.0, state[j] / 2.0, state[j] + z[t])
+        s = after - s / 3.0
+        out[t] = s
+    return s
+
+
+@pytest.mark.parametrize(("steps", "paths"), SHAPES)
+def test_loops_within_the_loop(steps, paths):
+    z = RNG.standard_normal((steps, paths))
+    weights = np.array([0.3, 0.0, 1.7])
+    check_same(*both(nested, lambda: (z, weights, 3, np.ones(paths), np.empty_like(z), np.zeros((3, paths)))), paths)
+    assert None not in abreast_forms(nested)
 
 
 def test_without_numba_the_error_says_what_to_do(monkeypatch):

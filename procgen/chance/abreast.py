@@ -1,0 +1,128 @@
+"""The text of a kernel with all paths abreast: at each step one path after another, as they lie in memory.
+
+Written from the text of the kernel for arguments of given kinds. Small whole numbers and small arrays of coefficients
+are written in, so that the compiler can unroll the loops over them and take several paths at a time. Each path goes
+through the same operations in the same order as alone.
+"""
+
+from __future__ import annotations
+
+import ast
+import copy
+from collections.abc import Mapping
+from typing import Any
+
+import numpy as np
+
+FEW = 8  # coefficients, and whole numbers, that are written in
+
+
+def by_step(definition: ast.FunctionDef) -> frozenset[str]:
+    """Names that are subscripted by the steps of the loop."""
+    steps = {ast.unparse(node.target) for node in definition.body if isinstance(node, ast.For)}
+    nodes = [node for node in ast.walk(definition) if isinstance(node, ast.Subscript)]
+    return frozenset(ast.unparse(node.value) for node in nodes if ast.unparse(node.slice) in steps)
+
+
+def kind_of(value: Any, subscripted: bool, by_step: bool, lanes: int) -> Any:
+    """How an argument is written: see `_Abreast`; None where it cannot be."""
+    if isinstance(value, tuple):
+        return ("few", len(value)) if 0 < len(value) <= FEW and all(isinstance(part, float) for part in value) else None
+    if isinstance(value, int) and not isinstance(value, bool) and 0 <= value <= FEW:
+        return ("whole", value)
+    dimensions = np.ndim(value)
+    if dimensions == 2:
+        return "tile" if value.shape[1] == lanes else "column" if value.shape[1] == 1 else None
+    if dimensions == 1 and subscripted and by_step:
+        return "steps"
+    if dimensions == 1 and subscripted:
+        return ("few", len(value)) if len(value) <= FEW else None  # of many, NumPy's rows are quicker
+    if dimensions == 1:
+        return "row" if len(value) == lanes else "one" if len(value) == 1 else None
+    return "number" if dimensions == 0 else None
+
+
+def passed(value: Any, kind: Any) -> Any:
+    """An argument as the text takes it: few coefficients as a tuple, whose length its type says."""
+    return tuple(value.tolist()) if isinstance(kind, tuple) and kind[1] and isinstance(value, np.ndarray) else value
+
+
+def abreast(definition: ast.FunctionDef, kinds: Mapping[str, Any], returns: int) -> str | None:
+    """A module with `run(lanes, *arguments, *rows)`; None where the kernel is not one loop over steps."""
+    loops = [node for node in definition.body if isinstance(node, ast.For)]
+    if len(loops) != 1 or None in kinds.values():
+        return None
+    place = definition.body.index(loops[0])
+    before, after = definition.body[:place], definition.body[place + 1 :]
+    moved = _assigned(loops[0].body)
+    if moved & _assigned(before) or any(kinds[name] not in _ROWS for name in moved & kinds.keys()):
+        return None
+    carried = sorted(moved & kinds.keys())
+    writer = _Abreast({**kinds, **dict.fromkeys(carried, "row")})
+    lines = [f"{name}_given = {name}\n{name} = np.empty(lanes)\n{name}[:] = {name}_given" for name in carried]
+    lines += [ast.unparse(writer.visit(copy.deepcopy(node))) for node in before if not isinstance(node, ast.Expr)]
+    loop = copy.deepcopy(loops[0])
+    loop.iter = writer.visit(loop.iter)
+    inner = ast.For(ast.Name("lane", ast.Store()), ast.parse("range(lanes)", mode="eval").body, [], [])
+    inner.body = [writer.visit(node) for node in loop.body]
+    loop.body = [inner]
+    lines.append(ast.unparse(ast.fix_missing_locations(loop)))
+    value = after[-1].value if after and isinstance(after[-1], ast.Return) else None
+    results = value.elts if isinstance(value, ast.Tuple) else [] if value is None else [value]
+    if not all(isinstance(result, ast.Name) and kinds.get(result.id) in _ROWS for result in results):
+        return None
+    rows = [f"row{i}" for i in range(returns)]
+    lines += [f"{row}[:] = {ast.unparse(result)}" for row, result in zip(rows, results, strict=True)]
+    body = "\n".join(lines).replace("\n", "\n    ")
+    return f"def run(lanes, {', '.join((*kinds, *rows))}):\n    {body}\n\nrun = compiled(run)\n"
+
+
+_ROWS = ("row", "one", "number")
+
+
+def _assigned(nodes: list[ast.stmt]) -> set[str]:
+    """Names that are given a value somewhere in the statements."""
+    return {
+        node.id
+        for statement in nodes
+        for node in ast.walk(statement)
+        if isinstance(node, ast.Name) and isinstance(node.ctx, ast.Store)
+    }
+
+
+class _Abreast(ast.NodeTransformer):
+    """Writes what a kernel says of one path as that of path `lane`.
+
+    Kinds: a tile (steps, lanes) or its one column; a row (lanes,), or one for all; a number; numbers (steps,); few
+    coefficients, their count beside it; a small whole number, written in.
+    """
+
+    def __init__(self, kinds: Mapping[str, Any]) -> None:
+        self.kinds = kinds
+
+    def visit_Subscript(self, node: ast.Subscript) -> ast.AST:
+        base = node.value
+        if isinstance(base, ast.Attribute) and isinstance(base.value, ast.Name):  # name.shape[0]
+            kind = self.kinds[base.value.id]
+            return ast.Constant(kind[1]) if isinstance(kind, tuple) else node
+        kind = self.kinds[base.id] if isinstance(base, ast.Name) else None
+        index = self.visit(node.slice)
+        if kind in ("tile", "column"):
+            index = ast.Tuple([index, _LANE if kind == "tile" else _FIRST], ast.Load())
+        return ast.Subscript(base, index, node.ctx)
+
+    def visit_Call(self, node: ast.Call) -> ast.AST:
+        if isinstance(node.func, ast.Name) and node.func.id == "len":
+            kind = self.kinds[ast.unparse(node.args[0])]
+            return ast.Constant(kind[1]) if isinstance(kind, tuple) else node
+        node.args = [self.visit(argument) for argument in node.args]
+        return node
+
+    def visit_Name(self, node: ast.Name) -> ast.AST:
+        kind = self.kinds.get(node.id)
+        if kind in ("row", "one"):
+            return ast.Subscript(node, _LANE if kind == "row" else _FIRST, node.ctx)
+        return ast.Constant(kind[1]) if isinstance(kind, tuple) and kind[0] == "whole" else node
+
+
+_LANE, _FIRST = ast.Name("lane", ast.Load()), ast.Constant(0)
