@@ -61,7 +61,7 @@ def from_text(text: str, file: str | None, faults: list[Fault]) -> Tree | None:
     except TooMuch as refusal:
         faults.append(refusal.fault)
     except yaml.YAMLError as error:
-        faults.append(_syntax(error, file))
+        faults.append(_syntax(error, file, text))
     except (ValueError, OverflowError):  # an escape such as "\UFFFFFFFF" that names no character
         message = "this is not valid YAML: an escape in a quoted text names no character; correct it"
         faults.append(Fault(Place(file, 0, 0, ""), message))
@@ -240,17 +240,28 @@ def _hidden(text: str, file: str | None) -> Iterator[Fault]:
             yield Fault(Place(file, number, match.start() + 1, ""), hidden_in(line))
 
 
-def _syntax(error: yaml.YAMLError, file: str | None) -> Fault:
+def _syntax(error: yaml.YAMLError, file: str | None, text: str) -> Fault:
     """Return the fault of a text that is not YAML, in the words of someone who wrote it by hand."""
     problem = getattr(error, "problem", None) or str(error)
     mark = getattr(error, "problem_mark", None)
     place = Place(file, mark.line + 1, mark.column + 1, "") if mark else Place(file, 0, 0, "")
+    if mark and (bare := _unquoted(re.split("\r\n|\r|\n", text)[mark.line :][:1], mark.column)):
+        wants = f'a name with brackets or braces wants quotes; write "{bare}"'
+        return Fault(place, f"this is not valid YAML: {wants}")
     for pattern, words in _PLAIN_WORDS.items():
         if match := re.search(pattern, problem):
             return Fault(place, f"this is not valid YAML: {match.expand(words)}")
     return Fault(place, f"this is not valid YAML: {problem}")
 
 
+def _unquoted(lines: list[str], column: int) -> str | None:
+    """Return the name with brackets or braces, as in series.load[0].ar.phi, that a parser stumbles over at a column."""
+    found = (match for line in lines for match in _BRACKETED.finditer(line) if match.start() < column <= match.end())
+    return next((match[0].rstrip(".") for match in found), None)
+
+
+_INDEX = r"[\[{]\s*\w+\s*[\]}]"
+_BRACKETED = re.compile(rf"[\w.]+(?:{_INDEX}[\w.]*)+|{_INDEX}[\w.]+(?:{_INDEX}[\w.]*)*")
 _PLAIN_WORDS = {
     r"found character '\\t'": "a tab; indent and separate with spaces",
     r"found character '(.)' that cannot start": r"a text cannot begin with \1; put it in quotes",

@@ -44,6 +44,33 @@ def test_core_schema(text, value):
     assert type(resolve(text)) is type(value)
 
 
+@pytest.mark.parametrize(
+    ("line", "name", "column"),
+    [
+        ("  a: {series.x[0].ar.phi: 0.7}", "series.x[0].ar.phi", 15),
+        ("  a: {time.steps: 6, series.x[0].ar.phi: 0.7}", "series.x[0].ar.phi", 30),
+        ("  a: {series.x[12]: 0.7}", "series.x[12]", 15),
+        ("  a: {correlation[0].value: 0.7, time.steps: 9}", "correlation[0].value", 18),
+        ("  a: [load, series.x[0].ar]", "series.x[0].ar", 21),
+        ("  a: {series.{load}.ar.phi: 0.7}", "series.{load}.ar.phi", 14),
+        ("  {load}.ar.phi: 0.7", "{load}.ar.phi", 9),
+        ("  a: {b:\n    {series.x[0][1].y: 1}}", "series.x[0][1].y", 14),
+    ],
+)
+def test_a_place_with_brackets_that_wants_quotes_is_shown_in_them(line, name, column):
+    (found,) = problems(f"seed: 1\nvariants:\n{line}\n")
+    assert f'a name with brackets or braces wants quotes; write "{name}"' in found
+    assert f"(a.yaml, line {3 + line.count(chr(10))}, column {column})" in found
+    assert problems(f"seed: 1\nvariants:\n{line}\n".replace(name, f'"{name}"')) == []
+
+
+def test_other_slips_beside_a_name_with_brackets_keep_their_words():
+    (found,) = problems('a: {note: "see x[0]" b: 1}\n')
+    assert "expected a comma or }" in found
+    (found,) = problems("a: [1, 2\nb: 3\n")
+    assert "quotes; write" not in found
+
+
 def test_not_a_number_is_a_number():
     assert math.isnan(resolve(".nan"))
 
