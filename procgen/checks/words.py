@@ -33,7 +33,7 @@ _MORE_LESS = {"level": ("higher than", "lower than"), "spread": ("larger than", 
 _SIGNED = ("mean", "variance", "level score", "spread score")  # how the checks end whose sign says more or less
 BALANCE = "shocks: balance of paths"
 START = "size of the start"
-_BETWEEN_PATHS = ("shocks: neighbouring paths", "neighbouring paths", BALANCE)
+_BETWEEN_PATHS = ("neighbouring paths", BALANCE)  # how the checks end
 _WHOLE = {
     "shocks: level by step": "the shocks' mean at a step is off by {} of their sd, root mean square",
     "shocks: level by phase": "the shocks' mean at a phase of the season is off by {} of their sd, root mean square",
@@ -54,7 +54,7 @@ _CORRELATIONS = {
 _DRAWN = ": distribution function"  # how the check of a drawn parameter ends
 FARTHEST, FARTHEST_SHOCK = "farthest value", "shocks: farthest"
 _STAYS = re.compile(r"share: (.+) after \1, (up to \d+ steps|longer)")
-GAP = " of the gap"  # how the checks end of a combination of series that theory calls steady
+GAP, TOGETHER = " of the gap", " of the sum"  # how the checks of a combination of series end, as `relations` has them
 _LEAST_P = math.log(1e-300)  # below this a p is only said to be smaller
 
 
@@ -147,7 +147,7 @@ def _says(top: Check) -> str:
         return f"{'smaller' if (top.estimate or 0.0) < (top.theory or 0.0) else 'larger'} than stated"
     if of_stays(top):
         return "lengths of stays are not as stated"
-    if top.what in _BETWEEN_PATHS:
+    if top.what.endswith(_BETWEEN_PATHS):
         return "paths are not independent of each other"
     if top.what == START:
         return f"the series starts {'narrower' if (top.estimate or 0.0) < 0 else 'wider'} than it goes on"
@@ -169,6 +169,7 @@ def _seen(top: Check) -> str:
         return f"{name_of(top)} is off most at {top.probe.removeprefix('worst: ')}, by {number(top.estimate, 4)} se"
     where = f" at {top.probe}" if top.probe else ""
     between = f" between {joined(top.series.split(' ~ '))}" if top.what.endswith(GAP) else ""
+    between = f" of {joined(top.series.split(' ~ '))} in sd" if top.what.endswith(TOGETHER) else between
     return f"{name_of(top)}{between}{where} is {number(top.estimate, 4)}, stated {number(top.theory, 4)}"
 
 
