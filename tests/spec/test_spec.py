@@ -52,9 +52,9 @@ def test_a_whole_spec():
     assert (list(spec.shared), list(spec.series)) == (["weather"], ["load_kw", "price"])
     load, price = spec.series.values()
     assert (load.unit, load.type, load.decimals, load.stream, load.note) == (
-        "kW", "float64", 2, "load_kw", "the meter of hall 2",
+        "kW", None, 2, "load_kw", "the meter of hall 2",
     )  # fmt: skip
-    assert (price.unit, price.type, price.decimals, price.stream, price.note) == (None, "float64", None, "price", None)
+    assert (price.unit, price.type, price.decimals, price.stream, price.note) == (None, None, None, "price", None)
     trend, seasonal, use, swing = load.of
     assert (trend.values["slope"], seasonal.values["period"], seasonal.values["peak"]) == (0.9 / 96, 96.0, 72.0)
     assert (use.times, swing.shock.values["sd"], swing.shock.label) == (6.5, 6.3, "swing")
