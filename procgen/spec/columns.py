@@ -8,7 +8,7 @@ from __future__ import annotations
 
 from collections import Counter
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import UTC, datetime
 from typing import Any
 
@@ -48,6 +48,7 @@ class Column(Domain):
 
     structured = True
     back = 0  # how many steps before step 0 rows may lie, beside as many as there are rows
+    dated = True  # whether a number is that of a moment, so that another start is not its own
 
     def describe(self) -> str:
         return "a list of numbers, or a column of a file such as {file: weather.csv, column: degrees, time: at}"
@@ -69,18 +70,22 @@ class Column(Domain):
     def _without_file(self, tree: Tree, reader: Reading) -> bool:
         """Have numbers in the place of a file; those of a file read already are matched with the steps of today."""
         if tree.origin is None:
-            return "file" not in tree.value or self._inlined(tree, reader, None)
-        written, table = tree.origin
+            return "file" not in tree.value or self._inlined(tree, reader)
+        written, table, begins = tree.origin
         tree.value, tree.keys = dict(written.value), written.keys
-        return self._inlined(tree, reader, table)
+        return self._inlined(tree, reader, table, begins)
 
-    def _inlined(self, tree: Tree, reader: Reading, table: Columns | None) -> bool:
+    def _inlined(
+        self, tree: Tree, reader: Reading, table: Columns | None = None, begins: tuple[int, int] | None = None
+    ) -> bool:
         """Put the numbers of the file in the place of its name; False after reporting why they cannot be."""
         before = len(reader.faults)
         asked = read_each(tree, FILE, reader)
         if len(reader.faults) == before and (asked["step"] is None) == (asked["time"] is None):
             reader.expected(tree, "the column of the steps or that of the times, one of them")
         if len(reader.faults) > before:
+            return False
+        if self.dated and asked["step"] is not None and not _as_it_was(begins, tree, reader):
             return False
         table = read_file(tree.value["file"], reader) if table is None else table
         by = asked["step"] or asked["time"]
@@ -96,7 +101,7 @@ class Column(Domain):
             message = f"the table has two rows for step {double}; keep one ({rows[0]} or {rows[1]})"
             reader.fault(tree.value["file"], message)
             return False
-        tree.origin = Tree(dict(tree.value), tree.place, dict(tree.keys)), table
+        tree.origin = Tree(dict(tree.value), tree.place, dict(tree.keys)), table, begins or _begins(reader)
         return self._put(tree, found, reader)
 
     def _put(self, tree: Tree, found: dict[int, float], reader: Reading) -> bool:
@@ -104,6 +109,12 @@ class Column(Domain):
 
     def schema(self) -> Schema:
         return {"anyOf": [Reals().schema(), mapping_of(FILE), mapping_of(NUMBERS)]}
+
+
+class Undated(Column):
+    """Numbers of which only the order counts, whatever moments they are of."""
+
+    dated = False
 
 
 PAST = (
@@ -116,7 +127,8 @@ PAST = (
 class Past(Column):
     """What came before step 0: numbers one a step, the last of them at step −1; read as a tuple of floats.
 
-    Numbers of a file with times go into the spec with their times, so that another start or step is noticed.
+    Numbers of a file with times go into the spec with their times, so that another start or step is noticed; those that
+    are matched by step are refused where the spec is read again with another one.
     """
 
     back = 10_000
@@ -190,6 +202,34 @@ class Past(Column):
 
     def schema(self) -> Schema:
         return {"anyOf": [Reals().schema(), mapping_of(FILE), mapping_of(PAST)]}
+
+
+def _begins(reader: Reading) -> tuple[int, int] | None:
+    """When steps 0 and 1 begin, in µs of UTC since 1970; None without a start."""
+    if reader.grid is None or reader.grid.start is None:
+        return None
+    first, second = replace(reader.grid, stamp="begin").stamps(0, 2).tolist()
+    return first, second
+
+
+def _as_it_was(begins: tuple[int, int] | None, tree: Tree, reader: Reading) -> bool:
+    """Whether steps begin when they did as rows were matched with them; False after reporting that they do not.
+
+    Rows with times are matched anew; those with steps would move along, and nobody would see it.
+    """
+    now = _begins(reader)
+    if begins is None or now is None or begins == now:
+        return True
+    step = 0 if begins[0] != now[0] else 1
+    was, is_now = (datetime.fromtimestamp(each[step] / 1e6, UTC).isoformat() for each in (begins, now))
+    reader.fault(
+        tree.value["step"],
+        f"the rows of {tree.value['file'].value} are matched by step, and step {step} began at {was} where they were "
+        f"stated, and begins at {is_now} now: their numbers would move along unseen; match them by time, as in "
+        "{file: …, column: …, time: …}, or state beside the new start that they are meant for it: "
+        f"{tree.place.path}: {{file: …, column: …, step: …}}",
+    )
+    return False
 
 
 def _time_of(step: int, reader: Reading) -> str:

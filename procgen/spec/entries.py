@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterator, Mapping, Sequence
 from typing import Any, Protocol
 
-from procgen.spec.declare import INVALID, Body, Choice, Parameter, Real, read_each
+from procgen.spec.declare import INVALID, Body, Parameter, Real, read_each
 from procgen.spec.domains import Reading, varies
 from procgen.spec.model import Entry, Frozen
 from procgen.spec.tree import NAME, Tree
@@ -14,14 +14,6 @@ from procgen.spec.words import did_you_mean, unknown_key
 
 ENTRY_KEYS = ("as", "times")
 SERIES_KEYS = ("of", "unit", "type", "decimals", "stream", "note", "before")
-TYPE = Parameter(
-    "type",
-    "",
-    Choice("float64", "float32", "int64"),
-    "type of the column; when absent, int64 where all values are whole numbers, none can be missing and no `decimals` "
-    "are given, else float64",
-    default=None,
-)
 SPREAD = ("sd", "total_sd")
 REPLACED = (*SPREAD, "law", "spread")  # what a shock says itself
 

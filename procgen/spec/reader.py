@@ -11,8 +11,8 @@ from typing import Any
 from procgen.spec.calendar import Grid
 from procgen.spec.columns import Past
 from procgen.spec.correlated import read_correlation
-from procgen.spec.declare import INVALID, Body, Parameter, Real, Text, Whole, read_each
-from procgen.spec.entries import SERIES_KEYS, TYPE, read_body, read_name
+from procgen.spec.declare import INVALID, Body, Choice, Parameter, Real, Text, Whole, read_each
+from procgen.spec.entries import SERIES_KEYS, read_body, read_name
 from procgen.spec.file import text_of
 from procgen.spec.groups import OWN, read_groups
 from procgen.spec.links import Links
@@ -21,7 +21,7 @@ from procgen.spec.parameters import Known, check_tables, read_section, read_vary
 from procgen.spec.places import Declared
 from procgen.spec.timegrid import MOST, TIME, read_time
 from procgen.spec.tree import TooMuch, Tree, from_data
-from procgen.spec.variants import SECTION, Setting, Written, applied, in_variant, read_variants
+from procgen.spec.variants import SECTION, Setting, Written, applied, in_variant, read_variants, rewritten
 from procgen.spec.varying import Varying
 from procgen.spec.yaml12 import from_text
 
@@ -39,7 +39,7 @@ SECTIONS = ("time", "reuse", "parameters", "shared", "series", "groups", "correl
 SERIES = (
     Parameter("of", "", Body(), "the terms of the series"),
     Parameter("unit", "", Text(), "unit of the values, kept in the metadata of the column", default=None),
-    TYPE,
+    Parameter("type", "", Choice("float64", "float32", "int64"), "type of the column", default=None),
     Parameter("decimals", "", Whole(at_least=0, at_most=15), "decimals to round to", default=None),
     Parameter("stream", "", Text(), "name its draws are found by; its own when absent", default=None),
     Parameter("note", "", Text(), "free text", default=None),
@@ -290,7 +290,7 @@ def change(spec: Spec, **values: int) -> Spec:
         check_size(tree, head["paths"], grid.steps, len(spec.series), reader)
     if reader.faults or grid is None:
         raise _error(reader.faults)
-    written = spec.written and replace(spec.written, tree=tree)
+    written = spec.written and rewritten(spec.written, values, settable(spec.written.catalogue))
     changed = replace(spec, seed=head["seed"], paths=head["paths"], time=grid, raw=tree.plain(), written=written)
     check_tables(tree, changed, reader)
     if reader.faults:

@@ -84,6 +84,12 @@ def applied(tree: Tree, settings: Iterable[Setting], declared: Declared, faults:
     return _pruned(tree)
 
 
+def rewritten(written: Written, values: Mapping[str, int], declared: Declared) -> Written:
+    """Return what is read again once paths, steps or seed are others; it keeps what files said, and for when."""
+    settings = settings_of({"time.steps" if name == "steps" else name: value for name, value in values.items()})
+    return replace(written, tree=applied(written.tree, settings, declared, []))
+
+
 def settings_of(values: Mapping[str, Any]) -> tuple[Setting, ...]:
     """Return settings from plain data by place; SpecError with what cannot stand in a spec."""
     faults: list[Fault] = []

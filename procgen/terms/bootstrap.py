@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from procgen.chance.laws import LAWS
-from procgen.spec.columns import Column
+from procgen.spec.columns import Undated
 from procgen.spec.declare import Flag, Parameter, Span
 from procgen.terms.base import Ahead, Draw, Term, number
 from procgen.terms.support import EVERYTHING, finite
@@ -29,7 +29,7 @@ class MovingBlocks(Term):
         Parameter(
             "values",
             "v",
-            Column(),
+            Undated(),
             "the recorded numbers, or a column of a file, whose numbers then become a part of the spec",
             unit="series",
         ),

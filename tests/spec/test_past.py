@@ -73,6 +73,64 @@ def test_another_start_reads_the_record_up_to_it_or_says_that_it_ends_before(tmp
     assert spec.set({"series.x.before": None}).series["x"].before is None
 
 
+def by_step(folder, time=None, **more):
+    table = pd.DataFrame({"step": [-3, -2, -1, 0, 1, 2, 3], "load": [7.0, 8.5, 9.0, 1.0, 2.0, 3.0, 4.0]})
+    table.to_csv(folder / "h.csv", index=False)
+    return spec_file(folder, {**FILE, "step": "step"}, time or DAILY, **more)
+
+
+@pytest.mark.parametrize(
+    ("place", "value", "message"),
+    [
+        ("time.start", "2027-03-11", "step 0 began at 2027-03-10T00:00:00.* and begins at 2027-03-11T00:00:00.* now"),
+        ("time.every", "12h", "step 1 began at 2027-03-11T00:00:00.* and begins at 2027-03-10T12:00:00.* now"),
+        ("time.zone", "Europe/Rome", "step 0 began at 2027-03-10T00:00:00.* and begins at 2027-03-09T23:00:00.* now"),
+    ],
+)
+def test_a_file_by_step_does_not_move_with_another_start_unseen(tmp_path, place, value, message):
+    spec = pg.load(by_step(tmp_path))
+    with pytest.raises(pg.SpecError) as error:
+        spec.set({place: value})
+    (fault,) = error.value.faults
+    assert re.search(rf"^the rows of h.csv are matched by step, and {message}.* match them by time", fault.message)
+    assert "series.x.before: {file: …, column: …, step: …}" in fault.message
+    assert fault.place.path == "series.x.before.step" and fault.place.line > 0
+    with pytest.raises(pg.SpecError, match="matched by step"):
+        spec.changed(paths=7).set({place: value})
+    meant = {**FILE, "file": str(tmp_path / "h.csv"), "step": "step"}
+    assert spec.set({place: value, "series.x.before": meant}).series["x"].before == (7.0, 8.5, 9.0)
+
+
+@pytest.mark.parametrize("settings", [{"time.steps": 2}, {"time.stamp": "end"}, {"series.x.of": [AR]}, {"seed": 8}])
+def test_a_file_by_step_stays_where_the_start_does(tmp_path, settings):
+    spec = pg.load(by_step(tmp_path))
+    assert spec.set(settings).set(settings).series["x"].before == (7.0, 8.5, 9.0)
+
+
+def test_a_start_for_a_spec_without_one_moves_nothing(tmp_path):
+    spec = pg.load(by_step(tmp_path, HEAD["time"]))
+    assert spec.set({"time.start": "2027-03-11", "time.every": "1d"}).series["x"].before == (7.0, 8.5, 9.0)
+
+
+def test_a_variant_with_another_start_tells_of_the_file_by_step(tmp_path):
+    (said,) = faults(by_step(tmp_path, variants={"later": {"time.start": "2027-03-12"}}))
+    assert "matched by step, and step 0 began at 2027-03-10" in said
+    again = {"time.start": "2027-03-12", "series.x.before": {**FILE, "step": "step"}}
+    spec = pg.load(by_step(tmp_path, variants={"later": again}))
+    assert spec.variant("later").series["x"].before == (7.0, 8.5, 9.0)
+
+
+def test_a_given_input_by_step_does_not_move_either_and_blocks_to_draw_from_may(tmp_path):
+    values = {**FILE, "step": "step"}
+    by_step(tmp_path)
+    spec = pg.load(spec_file(tmp_path, None, DAILY, series={"x": [{"given": {"values": values}}]}))
+    with pytest.raises(pg.SpecError, match=r"matched by step.*given.values: \{file"):
+        spec.set({"time.start": "2027-03-11"})
+    drawn = [{"moving_blocks": {"values": values, "length": 2}}]
+    blocks = pg.load(spec_file(tmp_path, None, DAILY, series={"x": drawn}))
+    assert blocks.set({"time.start": "2027-03-11"}).time.start.day == 11
+
+
 def without(table, *rows):
     return table.drop(index=list(rows))
 
