@@ -10,7 +10,7 @@ import numpy as np
 from procgen.spec.copulas import COPULA, Ties
 from procgen.spec.declare import INVALID, Domain, Flag, Parameter, Reading, Real, Reals, Records, Schema, read_each
 from procgen.spec.domains import one_or_list
-from procgen.spec.following import BY, ByState, Followers, states_in
+from procgen.spec.following import BY, ByState, Followers, in_state, states_in
 from procgen.spec.links import Links
 from procgen.spec.model import Correlation, Frozen
 from procgen.spec.nearest import DECIMALS, nearest
@@ -68,8 +68,8 @@ class Matrix(Domain):
         return {"type": "array", "items": {"type": "array", "items": Real(at_least=-1, at_most=1).schema()}}
 
 
-_EACH = Parameter("value", "ρ", ByState(Real(above=-1.0, below=1.0)), "correlation of the primary normals")
-_VALUE = Parameter("value", "ρ", Real(above=-1.0, below=1.0), "correlation of the primary normals")
+_NUMBER = ByState(Real(above=-1.0, below=1.0))
+_EACH = Parameter("value", "ρ", _NUMBER, "correlation of the primary normals")
 _FORMS: dict[str, tuple[Parameter, ...]] = {
     "between": (Parameter("between", "", Names(exactly=2), "the two that are correlated"), _EACH, BY),
     "within": (Parameter("within", "", Names(), "names of which any two are correlated alike"), _EACH, BY),
@@ -82,16 +82,18 @@ _FORMS: dict[str, tuple[Parameter, ...]] = {
     ),
     "loadings": (
         Parameter("names", "", Names(), "the rows of the loadings"),
-        Parameter("loadings", "Λ", Matrix(), "what each has of each common factor: R = ΛΛ′ off the diagonal"),
+        Parameter("loadings", "Λ", ByState(Matrix()), "what each has of each common factor: R = ΛΛ′ off the diagonal"),
+        BY,
     ),
     "blocks": (
         Parameter(
             "blocks",
             "",
-            Records(Parameter("names", "", Names(), "names of which any two are correlated alike"), _VALUE),
+            Records(Parameter("names", "", Names(), "names of which any two are correlated alike"), _EACH),
             "groups, each with a correlation of its own",
         ),
-        Parameter("across", "ρ", Real(above=-1.0, below=1.0), "correlation of any two of different groups", 0.0),
+        Parameter("across", "ρ", _NUMBER, "correlation of any two of different groups", 0.0),
+        BY,
     ),
 }
 FORMS = {form: (*parameters, COPULA) for form, parameters in _FORMS.items()}
@@ -262,18 +264,25 @@ def _read_item(tree: Tree, pairs: _Pairs, reader: Reading) -> None:
 def _by_state(
     form: str, tree: Tree, values: dict[str, Any], states: Sequence[str], count: int, reader: Reading
 ) -> tuple[tuple[Any, ...], ...] | None:
-    """Return the correlations of an item, each a mapping of states to numbers where it has states."""
+    """Return the correlations of an item, each a mapping of states to numbers where these differ."""
     if not states:
         return _rows(form, tree, values, count, reader)
-    key, each = "matrix" if form == "matrix" else "value", {}
+    each = {}
     for state in states:
-        inside = Tree({**tree.value, key: tree.value[key].value[state]}, tree.place, tree.keys)
-        rows = _rows(form, inside, {**values, key: values[key][state]}, count, reader)
+        inside = tree
+        if form in ("matrix", "loadings"):  # whose faults have places in them
+            inside = Tree({**tree.value, form: tree.value[form].value[state]}, tree.place, tree.keys)
+        rows = _rows(form, inside, in_state(values, state), count, reader)
         if rows is None:
             return None
         each[state] = rows
     places = range(count)
-    return tuple([tuple([Frozen({state: rows[i][j] for state, rows in each.items()}) for j in places]) for i in places])
+    return tuple([tuple([_of_states({s: rows[i][j] for s, rows in each.items()}) for j in places]) for i in places])
+
+
+def _of_states(numbers: dict[str, float]) -> Any:
+    """Numbers by state; the number itself where it is the same in all."""
+    return Frozen(numbers) if len(set(numbers.values())) > 1 else next(iter(numbers.values()))
 
 
 def _names(form: str, values: dict[str, Any]) -> list[Tree] | None:

@@ -14,6 +14,7 @@ from procgen.spec.model import Following, Frozen
 from procgen.spec.named import Named
 from procgen.spec.tree import Tree
 
+BY_STATE = ("value", "matrix", "loadings", "across")  # and the value of each of `blocks`
 BY = Parameter("by", "", Text(), "what says the state: a chain, a flag, or the regime of a series", None)
 
 
@@ -39,11 +40,10 @@ class ByState(Domain):
 
 def states_in(tree: Tree, values: Mapping[str, Any], links: Links, reader: Reading) -> tuple[str, ...] | None:
     """Return the states that an item gives values for, () where it has one value for all; None after a fault."""
-    key = "value" if "value" in values else "matrix" if "matrix" in values else ""
-    given, by = values.get(key), values.get("by")
-    if INVALID in (given, by):
+    given, by = _given(tree, values), values.get("by")
+    if by is INVALID or any(value is INVALID for _, value in given):
         return None
-    stated = isinstance(given, Frozen)
+    stated = [(place, tuple(value)) for place, value in given if isinstance(value, Frozen)]
     if by is None and not stated:
         return ()
     if by is None:
@@ -56,12 +56,40 @@ def states_in(tree: Tree, values: Mapping[str, Any], links: Links, reader: Readi
         reader.fault(place, str(error))
         return None
     if not stated:
-        reader.fault(tree.value[key], f"expected a value for each state of {by}, as in {{calm: 0.2, storm: 0.8}}")
+        reader.fault(given[0][0], f"expected a value for each state of {by}, as in {{calm: 0.2, storm: 0.8}}")
         return None
     if values.get("repair"):
         reader.fault(tree.value["repair"], "a matrix by state is not repaired; write one that is a correlation")
         return None
-    return tuple(given or ())
+    states = stated[0][1]
+    for at, others in stated[1:]:
+        if set(others) != set(states):
+            reader.fault(at, f"expected the states {', '.join(states)}, as before, got {', '.join(others)}")
+            return None
+    return states
+
+
+def _given(tree: Tree, values: Mapping[str, Any]) -> list[tuple[Tree, Any]]:
+    """The values of an item that may differ by state, with where they are written."""
+    found = [(tree.value[key], values[key]) for key in BY_STATE if key in values and key in tree.value]
+    if isinstance(values.get("blocks"), tuple):
+        blocks = tree.value["blocks"]
+        written = blocks.value if blocks.is_list else (blocks,)
+        inside = [(one.value["value"], block["value"]) for one, block in zip(written, values["blocks"], strict=True)]
+        found = [*inside, *found]
+    return found
+
+
+def in_state(values: Mapping[str, Any], state: str) -> dict[str, Any]:
+    """The values of an item in one state: those by state are its own, others hold in all."""
+
+    def here(value: Any) -> Any:
+        return value[state] if isinstance(value, Frozen) else value
+
+    found = {key: here(value) if key in BY_STATE else value for key, value in values.items()}
+    if "blocks" in found:
+        found["blocks"] = tuple([{**block, "value": here(block["value"])} for block in found["blocks"]])
+    return found
 
 
 class Followers:

@@ -10,6 +10,7 @@ import hashlib
 from collections import Counter
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, fields
+from itertools import combinations
 from typing import Any
 
 import numpy as np
@@ -251,6 +252,13 @@ def _correlation(spec: Spec) -> Facts:
             pair = sorted((first, names[j]))
             if matrix[i][j] != 0.0:
                 facts[f"correlation of {pair[0]} and {pair[1]}"] = _Fact(matrix[i][j], shown(matrix[i][j]))
+    for each in spec.correlation.following:
+        for (i, first), (j, second) in combinations(enumerate(each.names), 2):
+            values = {state: matrix[i][j] for state, matrix in zip(each.states, each.matrices, strict=True)}
+            if any(values.values()):
+                pair = sorted((first, second))
+                fact = _Fact((each.by, values), f"by {each.by} {shown(values)}")
+                facts[f"correlation of {pair[0]} and {pair[1]}"] = fact
     for copula in spec.correlation.copulas:
         place = f"t copula of {', '.join(sorted(copula.names)[:4])}{', …' if len(copula.names) > 4 else ''}"
         facts[place] = _Fact((sorted(copula.names), copula.df), f"df {shown(copula.df)}")

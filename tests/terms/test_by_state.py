@@ -7,6 +7,7 @@ import pytest
 
 import procgen as pg
 from procgen.chance.laws import LAWS
+from procgen.spec.meaning import changes
 from procgen.spec.reader import SpecError, read_raw
 from procgen.terms import catalogue
 from procgen.terms.graph import build
@@ -43,6 +44,78 @@ def test_each_step_is_that_of_the_correlation_of_its_state(copula):
     for name in "abc":
         expected = np.where(found["m"] == 1, fixed[1][name], fixed[0][name])
         np.testing.assert_array_equal(found[name], expected)
+
+
+ABC = [f"{name}.white_noise" for name in "abc"]
+LOADINGS = {"calm": [[0.3, 0], [0.2, 0.5], [0, 0.6]], "stress": [[0.8, 0], [0.9, 0.1], [0.7, -0.4]]}
+FACTORS = {"names": ABC, "by": "market", "loadings": LOADINGS}
+BLOCKS = {
+    "by": "market",
+    "blocks": [{"names": ABC[:2], "value": {"calm": 0.1, "stress": 0.7}}, {"names": [*ABC[2:], "d.ar"], "value": 0.4}],
+    "across": {"stress": 0.35, "calm": 0.0},
+}
+
+
+def in_each(item, state):
+    """An item with the values of one state."""
+    if isinstance(item, dict):
+        return item[state] if state in item else {k: in_each(v, state) for k, v in item.items() if k != "by"}
+    return [in_each(one, state) for one in item] if isinstance(item, list) else item
+
+
+@pytest.mark.parametrize("item", [FACTORS, BLOCKS, {**FACTORS, **T4}], ids=["loadings", "blocks", "loadings, t"])
+def test_factors_and_blocks_follow_too(item):
+    """Bit for bit what each state's loadings, or blocks, draw alone; the series of one state each."""
+    series = {**NOISES, "d": [{"ar": {"phi": 0, "sd": 1}}], "m": [{"use": "market"}]}
+    found = drawn(item, series=series, tiles=(7, 33, 20))
+    fixed = [drawn(in_each(item, state), series=series) for state in ("calm", "stress")]
+    assert 0.2 < found["m"].mean() < 0.5
+    for name in "abcd":
+        np.testing.assert_array_equal(found[name], np.where(found["m"] == 1, fixed[1][name], fixed[0][name]))
+
+
+@pytest.mark.parametrize("item", [FACTORS, BLOCKS], ids=["loadings", "blocks"])
+def test_their_covariance_is_the_mean_over_the_states(item):
+    """R = ΛΛ′ off the diagonal in each state (the factor model as in Anderson 2003, ch. 14; from memory).
+
+    Of two states that last 6 and 3 steps the chain spends 2/3 and 1/3 of the time in them (Hamilton 1989).
+    """
+    series = {**NOISES, "d": [{"ar": {"phi": 0, "sd": 1}}]}
+    th = theory_of(series, shared=MARKET, correlation=[item])
+    if item is FACTORS:
+        states = [np.array(LOADINGS[state]) for state in ("calm", "stress")]
+        calm, stress = (loadings @ loadings.T for loadings in states)
+        mean = (2 * calm + stress) / 3
+        means = {"ab": mean[0, 1], "ac": mean[0, 2], "bc": mean[1, 2]}
+    else:
+        means = {"ab": 0.1 * 2 / 3 + 0.7 / 3, "cd": 0.4, "ac": 0.35 / 3, "bd": 0.35 / 3}
+    sd = {"a": 1, "b": 2, "c": 3, "d": 1}
+    for (x, y), mean in means.items():
+        assert th.cross(x, y).covariance(4, 4) == pytest.approx(mean * sd[x] * sd[y], rel=1e-12)
+
+
+@pytest.mark.parametrize(
+    ("item", "message"),
+    [
+        ({**FACTORS, "by": None}, "needs `by`"),
+        ({**FACTORS, "loadings": LOADINGS["calm"]}, "expected a value for each state of market"),
+        ({**FACTORS, "loadings": {**LOADINGS, "stress": [[0.8], [0.9]]}}, "expected 3 rows, one a name"),
+        ({**FACTORS, "loadings": {**LOADINGS, "stress": [[0.8], [0.9], [1.0]]}}, "squares that sum to less than 1"),
+        ({**BLOCKS, "across": {"calm": 0, "storm": 0.3}}, "the states calm, stress, as before, got calm, storm"),
+        ({**BLOCKS, "across": {"calm": 0, "stress": 0.9}}, "expected a positive definite correlation in stress"),
+    ],
+)
+def test_faults_of_factors_and_blocks(item, message):
+    item = {key: value for key, value in item.items() if value is not None}
+    with pytest.raises(SpecError, match=message):
+        build(spec(item, series={**NOISES, "d": [{"ar": {"phi": 0, "sd": 1}}]}))
+
+
+def test_another_number_in_a_state_is_another_meaning():
+    louder = {**FACTORS, "loadings": {**LOADINGS, "calm": [[0.4, 0], [0.2, 0.5], [0, 0.6]]}}
+    (change,) = changes(spec(FACTORS), spec(louder))
+    assert change.place == "correlation of a.white_noise and b.white_noise"
+    assert "calm: 0.06" in change.old and "calm: 0.08" in change.new
 
 
 def test_the_leader_and_those_before_an_appended_name_stay_as_they_are():
@@ -90,6 +163,18 @@ def test_covariances_are_those_of_the_mean_correlation():
     (pair,) = th.correlated
     assert pair.normals == pytest.approx(MEAN) and "0.2 in calm, 0.8 in stress" in pair.copula
     assert th["x"].gaussian and th["y"].gaussian and not cross.gaussian
+
+
+def test_one_number_in_all_states_is_a_plain_correlation():
+    """Stated by state, and the same everywhere: the covariance is that of this number."""
+    pair = {**PAIR, "value": {"calm": 0.4, "stress": 0.4}}
+    found, plain = (
+        theory_of(FILTERS, shared=MARKET, correlation=[item])
+        for item in (pair, {"between": PAIR["between"], "value": 0.4})
+    )
+    assert found.cross("x", "y").covariance(9, 9) == plain.cross("x", "y").covariance(9, 9) > 0
+    both = [drawn(item, series=FILTERS)["y"] for item in (pair, {"between": PAIR["between"], "value": 0.4})]
+    np.testing.assert_array_equal(both[0][1:], both[1][1:])  # what follows a chain starts by way of steps before step 0
 
 
 def test_step_0_is_drawn_in_that_covariance():
