@@ -12,6 +12,7 @@ from __future__ import annotations
 import numpy as np
 
 from procgen.chance.blocks import Scratch, blockwise
+from procgen.chance.kernel import is_compiling
 
 _LN2_HIGH, _LN2_LOW = 6.93147180369123816490e-01, 1.90821492927058770002e-10
 _PER_LN2 = 1.44269504088896338700e00
@@ -66,7 +67,7 @@ def exp(x, out: np.ndarray | None = None) -> np.ndarray:
 
 def log(x, out: np.ndarray | None = None) -> np.ndarray:
     """The natural logarithm, elementwise, within 1 ulp; -inf at 0, nan below 0."""
-    return blockwise(log_of, x, out)
+    return blockwise(_log, x, out)
 
 
 def log1p(x, out: np.ndarray | None = None) -> np.ndarray:
@@ -108,6 +109,11 @@ def horner(coefficients: tuple[float, ...], x: np.ndarray, out: np.ndarray) -> n
 
 
 def _exp(x: np.ndarray, out: np.ndarray, scratch: Scratch) -> None:
+    if is_compiling():
+        from procgen.chance import compiled_elementary
+
+        compiled_elementary.exp(x, out)
+        return
     times_exp(1.0, x, 0.0, out, scratch)
 
 
@@ -145,6 +151,15 @@ def times_exp(
     if undefined.any():
         r[undefined] = np.nan
     np.copyto(out, r)
+
+
+def _log(x: np.ndarray, out: np.ndarray, scratch: Scratch) -> None:
+    if not (is_compiling() and x.size and x.min() >= 2.0**-1022 and x.max() < np.inf):
+        log_of(x, out, scratch)
+        return
+    from procgen.chance import compiled_elementary
+
+    compiled_elementary.log(x, out)
 
 
 def log_of(x: np.ndarray, out: np.ndarray, scratch: Scratch) -> None:

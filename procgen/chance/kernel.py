@@ -216,7 +216,8 @@ def compiled_function(function: Callable, inline: Literal["never", "always"] = "
     config: Any = numba.config
     kept, config.CACHE_DIR = config.CACHE_DIR, str(cache_folder())
     try:
-        return numba.njit(nogil=True, fastmath=False, cache=True, inline=inline)(function)
+        # error_model: a division by 0 is inf, as in the plain form, and needs no branch
+        return numba.njit(nogil=True, fastmath=False, cache=True, inline=inline, error_model="numpy")(function)
     finally:
         config.CACHE_DIR = kept
 

@@ -1,0 +1,50 @@
+"""exp and log, compiled: the bits of the plain form, at the ends of their range too."""
+
+import numpy as np
+import pytest
+
+from procgen.chance.elementary import exp, log
+from procgen.chance.kernel import compiling
+
+pytest.importorskip("numba", reason="the extra `speed` compiles them")
+
+RNG = np.random.default_rng(5)
+ENDS = [709.78, 709.79, 800.0, 801.0, -708.4, -745.1, -745.2, -801.0]
+ODD = np.array([0.0, -0.0, np.inf, -np.inf, np.nan, 5e-324, 2.0**-1022, *ENDS])
+WIDE = np.concatenate([RNG.normal(0, 1, 40_000), RNG.uniform(-760, 720, 40_000), RNG.normal(0, 1e-9, 1_000)])
+ABOVE = np.ldexp(RNG.uniform(0.5, 1, 40_000), RNG.integers(-1020, 1024, 40_000))
+
+
+def same_bits(function, x):
+    with np.errstate(all="ignore"):
+        plain = function(x)
+        with compiling():
+            compiled = function(x)
+            inside = x.copy()
+            function(inside, out=inside)
+    assert np.array_equal(plain.view(np.int64), compiled.view(np.int64))
+    assert np.array_equal(plain.view(np.int64), inside.view(np.int64))
+
+
+@pytest.mark.parametrize("x", [WIDE, np.concatenate([WIDE[:9], ODD]), ODD[:0]], ids=["wide", "odd", "0"])
+def test_exp(x):
+    same_bits(exp, x)
+
+
+@pytest.mark.parametrize("x", [ABOVE, np.concatenate([ABOVE[:9], ODD, -ABOVE[:3]]), ODD[:0]], ids=["wide", "odd", "0"])
+def test_log(x):
+    same_bits(log, x)
+
+
+def test_compiled_division_by_nothing_is_as_the_plain_one():
+    from procgen.chance.kernel import kernel
+    from tests.chance.test_kernel import both
+
+    with np.errstate(divide="ignore"):
+        plain, compiled = both(kernel(shares), lambda: (np.zeros((2, 3)), np.empty((2, 3))))
+    assert np.array_equal(plain[1], compiled[1]) and np.isinf(plain[1]).all()
+
+
+def shares(z, out):
+    for t in range(z.shape[0]):
+        out[t] = 1.0 / z[t]
