@@ -11,6 +11,8 @@ import numpy as np
 from procgen.chance.kernel import compiled_function
 
 LEFT = -1.0  # in place of a count that is not found here
+_ABREAST = 64  # counts that are added up side by side
+_NONE = (-1.0, 0.0, 0.0)  # uniform, mean and chance of none in place of what there are too few of
 
 
 @compiled_function
@@ -41,20 +43,47 @@ def _above_negative_binomial(k, chance, share, size, found, most):
 
 
 @compiled_function
+def _rare_poisson(wanted, nothing, mean, climb, rare, near, found, most):
+    """The least count that is enough for one uniform, which may be so near to 1 that areas are added from above."""
+    chance, below = nothing, nothing
+    for k in range(climb):
+        more = wanted > below
+        if wanted > rare and below > near:
+            more = _above_poisson(float(k), chance, mean, found, most) > 1.0 - wanted
+        if not more:
+            return float(k)
+        chance = chance * (mean / (k + 1.0))
+        below = below + chance
+    return LEFT
+
+
+@compiled_function
 def poisson(u, nothing, mean, climb, rare, near, found, most, out):
-    """The least counts that are enough for uniforms u, from the chances of none."""
-    for i in range(u.shape[0]):
-        wanted, chance, below, count = u[i], nothing[i], nothing[i], LEFT
+    """The least counts that are enough for uniforms u, from the chances of none.
+
+    Several are added up abreast until the last has enough: what is added to the others then changes no count.
+    """
+    wanted, each, chance, below = np.empty((4, _ABREAST))
+    count = np.empty(_ABREAST, np.int64)
+    for first in range(0, u.shape[0], _ABREAST):
+        size = min(_ABREAST, u.shape[0] - first)
+        for j in range(_ABREAST):
+            wanted[j], each[j], chance[j] = (u[first + j], mean[first + j], nothing[first + j]) if j < size else _NONE
+            below[j], count[j] = chance[j], 0
         for k in range(climb):
-            more = wanted > below
-            if wanted > rare and below > near:
-                more = _above_poisson(float(k), chance, mean[i], found, most) > 1.0 - wanted
-            if not more:
-                count = float(k)
+            more, step = 0, k + 1.0
+            for j in range(_ABREAST):
+                short = np.int64(wanted[j] > below[j])
+                count[j] = count[j] + short
+                more = more + short
+                chance[j] = chance[j] * (each[j] / step)
+                below[j] = below[j] + chance[j]
+            if more == 0:
                 break
-            chance = chance * (mean[i] / (k + 1.0))
-            below = below + chance
-        out[i] = count
+        for j in range(size):
+            out[first + j] = float(count[j]) if count[j] < climb else LEFT
+            if wanted[j] > rare:
+                out[first + j] = _rare_poisson(wanted[j], nothing[first + j], each[j], climb, rare, near, found, most)
 
 
 @compiled_function
