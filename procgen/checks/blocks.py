@@ -91,10 +91,14 @@ class Window:
 
     def push(self, rows: NDArray) -> NDArray:
         """The held rows followed by the new ones; a view that lives until the next push."""
-        count = len(rows)
+        view = self.room(len(rows))
+        view[len(view) - len(rows) :] = rows
+        return view
+
+    def room(self, count: int) -> NDArray:
+        """The held rows followed by `count` new ones, which the caller fills."""
         if self._end + count > len(self._rows):
             self._make_room(count)
-        self._rows[self._end : self._end + count] = rows
         view = self._rows[self._end - self.held : self._end + count]
         self._end += count
         self.held = min(self.reach, self.held + count)

@@ -16,6 +16,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.chance.kernel import is_compiling
 from procgen.checks.verdict import Check
 
 STUCK, COPIED = "values that stay", "copied stretches"
@@ -140,19 +141,34 @@ class Watch:
 
     def absorb(self, x: NDArray) -> None:
         """Look at the next tile (steps, paths)."""
-        rows = np.concatenate([self.before, x])
-        self._follow(rows[self.length - 2 :])
-        self._mark(rows)
-        self.before = rows[-(self.length - 1) :].copy()
+        if is_compiling():
+            self._compiled(np.ascontiguousarray(x))
+        else:
+            rows = np.concatenate([self.before, x])
+            same = rows[self.length - 1 :] == rows[self.length - 2 : -1]
+            self._follow(x, same.any(axis=1))
+            self._mark(rows)
+        self.before = (x if len(x) >= self.length - 1 else np.concatenate([self.before, x]))[1 - self.length :].copy()
         self.step += len(x)
 
-    def _follow(self, rows: NDArray) -> None:
-        same = rows[1:] == rows[:-1]
-        some = same.any(axis=1)
+    def _compiled(self, x: NDArray) -> None:
+        from procgen.checks import fused
+
+        some = np.empty(len(x), dtype=bool)
+        fused.stays(self.before, x, some)
+        self._follow(x, some)
+        room = Marks(*(np.empty(x.size, each.dtype) for each in self.marks.arrays))
+        count = fused.marked(self.before, x, self.ends, _MIX, *room.arrays)
+        path, step = self.first_path + room.paths[:count], self.step + room.steps[:count]
+        self._keep(Marks(room.hashes[:count].copy(), room.values[:count].copy(), path, step))
+
+    def _follow(self, x: NDArray, some: NDArray[np.bool_]) -> None:
+        """Go on with runs over the steps of a tile; `some`: whether some path has the value of the step before."""
         for row in np.flatnonzero(some):
             if row and not some[row - 1]:
                 self.run[:] = 1
-            self.run = np.where(same[row], self.run + 1, 1)
+            last = x[row - 1] if row else self.before[-1]
+            self.run = np.where(x[row] == last, self.run + 1, 1)
             path = int(np.argmax(self.run))
             length = int(self.run[path])
             self.longest = max(self.longest, [length, -self.first_path - path, length - 1 - self.step - int(row)])
@@ -171,7 +187,10 @@ class Watch:
         for column in np.ascontiguousarray(grams.T).view(np.uint64):
             total = (total ^ column ^ (column >> np.uint64(32))) * _MIX[1]
             total ^= total >> np.uint64(29)
-        self.waiting.append(Marks(total, grams[:, -1].copy(), self.first_path + path, self.step + step))
+        self._keep(Marks(total, grams[:, -1].copy(), self.first_path + path, self.step + step))
+
+    def _keep(self, marks: Marks) -> None:
+        self.waiting.append(marks)
         if sum(len(marks.hashes) for marks in self.waiting) > KEPT:
             self._settle()
 

@@ -37,11 +37,22 @@ class Reach:
         self._chunks: dict[int, tuple[NDArray, NDArray]] = {}
         self._kurtosis: dict[int, float | None] = {}
 
-    def farthest(self, x: NDArray, first_path: int, first_step: int, known: Sequence[Far]) -> list[Far]:
-        """The KEPT farthest of those known and the values of a tile (steps, paths); what is not finite is left out."""
+    def farthest(
+        self,
+        x: NDArray,
+        first_path: int,
+        first_step: int,
+        known: Sequence[Far],
+        ends: tuple[NDArray, NDArray] | None = None,
+    ) -> list[Far]:
+        """The KEPT farthest of those known and the values of a tile (steps, paths); what is not finite is left out.
+
+        `ends` (steps,): the least and the largest value of each step, where they are known.
+        """
         mean, sd = self._at(first_step, len(x))
         with np.errstate(invalid="ignore", divide="ignore"):
-            worst = np.maximum(np.fmax.reduce(x, axis=1) - mean, mean - np.fmin.reduce(x, axis=1)) / sd
+            low, high = ends or (np.fmin.reduce(x, axis=1), np.fmax.reduce(x, axis=1))
+            worst = np.maximum(high - mean, mean - low) / sd
             least = max(_LEAST, known[-1][0]) if len(known) == KEPT else _LEAST
             rows = np.flatnonzero(worst >= least)
             if not rows.size:

@@ -29,15 +29,25 @@ _CLIPPED = 1e-15  # tail area below which a uniform in double precision, or a cl
 Far = list[Any]  # size of the normal score, minus step, minus path, shock, value: a list, as JSON has it
 
 
-def farthest(g: NDArray, z: NDArray, x: NDArray, first_path: int, first_step: int, known: Sequence[Far]) -> list[Far]:
+def farthest(
+    g: NDArray,
+    z: NDArray,
+    x: NDArray,
+    first_path: int,
+    first_step: int,
+    known: Sequence[Far],
+    worst: NDArray | None = None,
+) -> list[Far]:
     """The KEPT farthest of those known, of earlier steps, and a tile (steps, paths) of scores g, shocks z, values x.
 
-    Of scores of one size the earlier are kept.
+    Of scores of one size the earlier are kept. `worst` (steps,): the largest size of each step, where it is known.
     """
     full = len(known) == KEPT
     least = max(_LEAST, known[-1][0]) if full else _LEAST
     with np.errstate(invalid="ignore"):
-        rows = np.flatnonzero(np.fmax(np.fmax.reduce(g, axis=1), -np.fmin.reduce(g, axis=1)) > least)
+        if worst is None:
+            worst = np.fmax(np.fmax.reduce(g, axis=1), -np.fmin.reduce(g, axis=1))
+        rows = np.flatnonzero(worst > least)
         if not rows.size:
             return list(known)
         sizes = np.abs(g[rows])

@@ -13,6 +13,7 @@ from itertools import chain
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.chance import kernel
 from procgen.checks import missing
 from procgen.checks.blocks import BLOCK
 from procgen.checks.gather import Gather, Plan
@@ -24,9 +25,15 @@ from procgen.checks.tree import Tree, ranges
 from procgen.ensemble.plan import Block
 
 TILE = 1 << 16  # values of one series in a tile: half of a second-level cache
+COMPILING_REPAYS = 24_000_000  # values of one process, some 20 ns each; loading what is compiled takes half a second
 
 Tick = Callable[[int], None]  # rows just summed; may raise to stop the work
 Progress = Callable[[int, int], None]  # rows done, rows in all
+
+
+def repays(values: int) -> bool:
+    """Whether compiling repays for so many values of one process."""
+    return values > COMPILING_REPAYS
 
 
 class Lane:
@@ -150,18 +157,20 @@ def _tile(rest: NDArray | None, values: NDArray, at: int, count: int) -> NDArray
 class Pass:
     """One pass: `absorb` blocks, then ask for the `tree` of sums; paths that never reach the last step are left out."""
 
-    def __init__(self, plan: Plan, tick: Tick = lambda rows: None):
+    def __init__(self, plan: Plan, tick: Tick = lambda rows: None, compile: bool = False):
         self.plan, self.tick = plan, tick
+        self.compile = compile and kernel.available()
         self.lanes: dict[int, Lane] = {}
         self.tree: Tree[Gather] = Tree()
 
     def absorb(self, first_path: int, first_step: int, values: Mapping[str, NDArray]) -> None:
         """Add a block. Raises ValueError when it does not follow the last one of its paths."""
-        for first, end in ranges(first_path, first_path + len(values[self.plan.names[0]])):
-            lane = self._lane(first, end - first, first_step)
-            lane.absorb({n: values[n][first - first_path : end - first_path] for n in self.plan.names}, self.tick)
-            if lane.step >= self.plan.steps:
-                self.tree.add(first, end, self.lanes.pop(first).finish())
+        with kernel.compiling(self.compile or kernel.is_compiling()):
+            for first, end in ranges(first_path, first_path + len(values[self.plan.names[0]])):
+                lane = self._lane(first, end - first, first_step)
+                lane.absorb({n: values[n][first - first_path : end - first_path] for n in self.plan.names}, self.tick)
+                if lane.step >= self.plan.steps:
+                    self.tree.add(first, end, self.lanes.pop(first).finish())
 
     def _lane(self, first_path: int, paths: int, first_step: int) -> Lane:
         lane = self.lanes.get(first_path)
@@ -189,7 +198,7 @@ def in_one_process(plan: Plan, blocks: Blocks, whole: Block, progress: Progress 
         if progress is not None:
             progress(done, whole.rows)
 
-    one, seen = Pass(plan, tick), iter(blocks)
+    one, seen = Pass(plan, tick, repays(whole.rows * len(plan.names))), iter(blocks)
     first: list[tuple[int, int, Values]] = []
     plan.look(first_values(_noted(seen, first), whole), whole.first_path)
     for first_path, first_step, values in chain(first, seen):

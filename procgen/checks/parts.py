@@ -18,7 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.checks.gather import Gather, Plan
-from procgen.checks.lane import Pass
+from procgen.checks.lane import Pass, repays
 from procgen.checks.rectangles import Blocks, Values, first_values, grouped, named
 from procgen.ensemble import digest
 from procgen.ensemble.columns import as_float
@@ -33,11 +33,14 @@ WORK = "procgen.checks.parts:gather_chain"
 Tick = Callable[[int], None]
 
 
-def tasks(ensemble: OnDisk, spec: Any, columns: Mapping[str, str], same_draws: bool) -> list[dict[str, Any]]:
+def tasks(
+    ensemble: OnDisk, spec: Any, columns: Mapping[str, str], same_draws: bool, workers: int = 1
+) -> list[dict[str, Any]]:
     """One task for each range of paths, in order; `columns` are the series of `spec` and where they stand."""
     out = address(ensemble.path)
     shared = {"out": out, "manifest": ensemble.digest, "raw": spec.raw, "columns": dict(columns)}
     shared["same_draws"] = same_draws
+    shared["compile"] = repays(ensemble.whole.rows * len(columns) // workers)
     chains: dict[tuple[int, int], list[int]] = {}
     for number, part in enumerate(ensemble.manifest.parts):
         chains.setdefault((part.block.first_path, part.block.end_path), []).append(number)
@@ -48,7 +51,7 @@ def gather_chain(task: Mapping[str, Any], tick: Tick) -> list[dict[str, Any]]:
     """The record of one task: sums by range of paths, digest nodes by part, and what could not be read."""
     ensemble, plan = _context(task["shared"])
     chain = _Chain(ensemble, task["shared"]["columns"], task["parts"])
-    one = Pass(plan, tick)
+    one = Pass(plan, tick, task["shared"]["compile"])
     for first_path, first_step, values in chain.blocks():
         one.absorb(first_path, first_step, values)
     sums = [[first, end, *_packed(some)] for first, (end, some) in one.tree.nodes.items()]

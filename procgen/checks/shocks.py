@@ -13,10 +13,11 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.chance.kernel import is_compiling
 from procgen.checks import farthest
 from procgen.checks.blocks import GROUP, Window, across, add_lagged, add_products, scratch
 from procgen.checks.scores import BINS, Scores, cluster_scores
-from procgen.checks.stretches import StretchLane, StretchSums
+from procgen.checks.stretches import LENGTHS, StretchLane, StretchSums
 from procgen.checks.uniforms import bin_counts, uniforms
 
 MEMORY_LAGS = (1, 2, 3, 4, 5, 6, 8, 12)
@@ -39,6 +40,11 @@ class ShockLane:
         self.length = np.zeros(paths, dtype=np.int64)
         self.view = np.empty((0, paths))
         self.stretches = StretchLane(paths)
+        self.clean = 0  # steps without a gap, up to the last one
+
+    def sound(self) -> bool:
+        """Whether all that is held is known."""
+        return self.clean >= self.scores.held
 
 
 @dataclass
@@ -103,6 +109,11 @@ class ShockSums:
         lane.length += len(z) if whole else known.sum(axis=0)
         self.outside += self.scores.outside(z)
         g = self.scores.normal_scores(z)
+        compiled = whole and not offset and is_compiling() and z.shape[1] >= GROUP and lane.sound()
+        lane.clean = lane.clean + len(z) if whole else 0
+        if compiled:
+            self._compiled(z, g, first_step, lane, z if x is None else x)
+            return
         self.far = farthest.farthest(g, z, z if x is None else x, lane.first_path, first_step + offset, self.far)
         u = uniforms(g)
         self.counts += bin_counts(u if whole else u[known])
@@ -111,6 +122,29 @@ class ShockSums:
         self._along(g, clusters, lane, offset)
         self._across(g, known, whole, first_step + offset, lane, offset)
         self.stretches.absorb(g, first_step + offset, lane.stretches)
+
+    def _compiled(self, z: NDArray, g: NDArray, first_step: int, lane: ShockLane, x: NDArray) -> None:
+        """The same as the rest of `absorb`, where all shocks are known, in fewer passes."""
+        from procgen.checks import fused
+        from procgen.checks.uniforms import CELLS_OF_SD, lefts
+
+        steps, paths = g.shape
+        lane.view, clusters = lane.scores.push(g), lane.clusters.room(steps)
+        g = lane.view[len(lane.view) - steps :]
+        worst, sums = np.empty(steps, np.int64), np.empty((2, steps))
+        short = np.empty((steps // LENGTHS[0], paths))
+        fused.scored(g, lefts(), CELLS_OF_SD, self.counts, clusters[len(clusters) - steps :], worst)
+        both = np.array(self.lags), np.array(CLUSTER_LAGS)
+        fused.summed(lane.view, clusters, steps, *both, lane.totals, lane.beside, sums, short)
+        if not self.scores.gaussian:
+            fused.plain_sums(np.ascontiguousarray(z), lane.totals)
+        for row, lags, held in ((self.memory[0], self.lags, lane.view), (self.cluster[0], CLUSTER_LAGS, clusters)):
+            row += [paths * max(min(steps, len(held) - lag), 0) for lag in lags]
+        self.asymmetry[0] += paths * min(steps, len(lane.view) - 1)
+        self._add_profile(np.full(steps, float(paths)), sums, first_step)
+        self.rows.update({GROUP: steps * -(-paths // GROUP)})
+        self.far = farthest.farthest(g, z, x, lane.first_path, first_step, self.far, worst.view(float))
+        self.stretches.absorb(g, first_step, lane.stretches, short)
 
     def _single(self, z: NDArray, g: NDArray, lane: ShockLane, offset: int) -> None:
         add_products(lane.totals[0], g, None, offset)
@@ -136,16 +170,18 @@ class ShockSums:
         counts = np.full(len(g), float(paths)) if whole else known.sum(axis=1).astype(float)
         g = g if whole else np.where(known, g, 0.0)
         square = np.multiply(g, g, out=scratch(*g.shape))
-        at = slice(first_step, first_step + len(g)) if self.width == 1 else None
-        places = (first_step + np.arange(len(g))) // self.width
-        for row, values in zip(self.profile, (counts, across(g), across(square)), strict=True):
-            if at is not None:
-                row[at] += values
-            else:
-                np.add.at(row, places, values)
+        self._add_profile(counts, (across(g), across(square)), first_step)
         if paths > 1:
             add_products(lane.beside, g[:, 1:], g[:, :-1], offset)
             self.rows.update({min(paths, GROUP): len(g) * -(-paths // GROUP)} if whole else _runs(known))
+
+    def _add_profile(self, counts: NDArray, sums: Sequence[NDArray] | NDArray, first_step: int) -> None:
+        places = (first_step + np.arange(len(counts))) // self.width
+        for row, values in zip(self.profile, (counts, *sums), strict=True):
+            if self.width == 1:
+                row[first_step : first_step + len(counts)] += values
+            else:
+                np.add.at(row, places, values)
 
     def finish(self, lane: ShockLane) -> None:
         """Close a range of paths whose last step has been absorbed."""

@@ -127,7 +127,6 @@ class EnsembleOrigin:
         return in_one_process(plan_of(self.spec, self.steps, self.same_draws), blocks, self.ensemble.whole, progress)
 
     def _from_parts(self, workers: int | None, progress: Progress | None, scheduler: str | None) -> Gather:
-        todo = tasks(self.ensemble, self.spec, self.columns, self.same_draws)
         tree: Tree[Gather] = Tree()
         nodes: dict[int, dict[str, str]] = {}
 
@@ -142,6 +141,7 @@ class EnsembleOrigin:
         if workers is None and scheduler is None:
             workers = default_workers(self.rows * len(self.columns), WORTH)
         with opened(scheduler, workers) as engine:
+            todo = tasks(self.ensemble, self.spec, self.columns, self.same_draws, engine.size)
             if isinstance(self.ensemble.path, Path):
                 engine.check_sees(str(self.ensemble.path.absolute()))
             engine.run(Work(todo, WORK, keep, progress, 0, self.rows))

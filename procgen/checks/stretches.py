@@ -35,19 +35,21 @@ class StretchSums:
     def __init__(self) -> None:
         self.sums = np.zeros((2, len(LENGTHS)))
 
-    def absorb(self, g: NDArray, first_step: int, lane: StretchLane) -> None:
-        """Add scores (steps, paths) of steps that follow; a stretch with one that is not finite is left out."""
+    def absorb(self, g: NDArray, first_step: int, lane: StretchLane, short: NDArray | None = None) -> None:
+        """Add scores (steps, paths) of steps that follow; a stretch with one that is not finite is left out.
+
+        `short` are their sums over stretches of the first length, where they are known.
+        """
         if lane.rows is None:
             lane.rows = np.full((first_step % BLOCK, g.shape[1]), np.nan)
             lane.blocks = np.full((first_step // BLOCK % _GROWTH, g.shape[1]), np.nan)
         if len(lane.rows):
-            g = np.concatenate([lane.rows, g])
+            g, short = np.concatenate([lane.rows, g]), None
         whole = len(g) - len(g) % BLOCK
         lane.rows = g[whole:].copy()
-        self._add_blocks(g[:whole], lane)
+        self._add_blocks(_halved(g[:whole], 4) if short is None else short[: whole // LENGTHS[0]], lane)
 
-    def _add_blocks(self, g: NDArray, lane: StretchLane) -> None:
-        short = _halved(g, 4)
+    def _add_blocks(self, short: NDArray, lane: StretchLane) -> None:
         blocks = _halved(short, 2)
         held = np.concatenate([lane.blocks, blocks])
         whole = len(held) - len(held) % _GROWTH
@@ -65,7 +67,8 @@ class StretchSums:
     def finish(self, lane: StretchLane) -> None:
         """Close a range of paths."""
         if lane.rows is not None and len(lane.rows):
-            self._add_blocks(np.pad(lane.rows, ((0, BLOCK - len(lane.rows)), (0, 0)), constant_values=np.nan), lane)
+            rows = np.pad(lane.rows, ((0, BLOCK - len(lane.rows)), (0, 0)), constant_values=np.nan)
+            self._add_blocks(_halved(rows, 4), lane)
         self.sums[0] += lane.counts
         self.sums[1] += across(lane.totals)
 

@@ -9,6 +9,7 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.chance.kernel import is_compiling
 from procgen.checks import copies, extremes, support
 from procgen.checks.verdict import Check
 
@@ -52,8 +53,7 @@ class Structure:
     def absorb(self, column: int, x: NDArray, first_path: int, first_step: int, prints: NDArray[np.uint64]) -> bool:
         """Look at a tile (steps, paths) of one series; `prints` (paths,) is updated. True when all is finite."""
         what = self.series[column]
-        prints += fingerprint(x, first_step, column)
-        finite = bool(np.isfinite(x).all())
+        finite, ends = _looked(x, first_step, column, prints)
         wrong = None if finite else np.isinf(x) if what.gaps else ~np.isfinite(x)
         if wrong is not None and wrong.any():
             _note(self.not_finite, what.name, wrong, first_path, first_step)
@@ -74,7 +74,7 @@ class Structure:
             for k, count in enumerate((fits, whole, sample.size)):
                 seen[k] += count
         if what.reach is not None:
-            self.far[what.name] = what.reach.farthest(x, first_path, first_step, self.far.get(what.name, ()))
+            self.far[what.name] = what.reach.farthest(x, first_path, first_step, self.far.get(what.name, ()), ends)
         outside = what.possible.outside(x)
         if outside is not None:
             support.note(self.outside, what.name, outside, x, first_path, first_step)
@@ -221,10 +221,27 @@ def _equal(prints: NDArray, paths: NDArray) -> tuple[int, int, int]:
     return int(same.sum()), int(paths[order[second - 1]]), int(paths[order[second]])
 
 
+def _looked(
+    x: NDArray, first_step: int, column: int, prints: NDArray[np.uint64]
+) -> tuple[bool, tuple[NDArray, NDArray] | None]:
+    """Whether all values are finite, and if so, the extremes of each step; their fingerprints are added to `prints`."""
+    if is_compiling():
+        from procgen.checks import fused
+
+        low, high = np.empty((2, len(x)), dtype=np.int64)
+        finite = fused.looked(np.ascontiguousarray(x), _weights(first_step, len(x), column), prints, low, high)
+        ends = low.view(float), high.view(float)
+    else:
+        prints += fingerprint(x, first_step, column)
+        ends = x.min(axis=1), x.max(axis=1)
+        finite = bool(np.isfinite(ends).all())
+    return finite, ends if finite else None
+
+
 def fingerprint(x: NDArray, first_step: int, column: int) -> NDArray[np.uint64]:
     """A 64-bit sum (paths,) over the bits of a tile (steps, paths): equal for equal paths, and it adds over tiles."""
     bits = np.ascontiguousarray(x, dtype=np.float64).view(np.uint64)
-    weights = _odd(np.arange(first_step, first_step + len(x), dtype=np.uint64), column)
+    weights = _weights(first_step, len(x), column)
     total = np.zeros(x.shape[1], dtype=np.uint64)
     count = max(_AT_ONCE // x.shape[1], 1)
     for start in range(0, len(x), count):
@@ -235,7 +252,9 @@ def fingerprint(x: NDArray, first_step: int, column: int) -> NDArray[np.uint64]:
     return total
 
 
-def _odd(step: NDArray[np.uint64], column: int) -> NDArray[np.uint64]:
+def _weights(first_step: int, steps: int, column: int) -> NDArray[np.uint64]:
+    """An odd number for each step."""
+    step = np.arange(first_step, first_step + steps, dtype=np.uint64)
     x = step * np.uint64(0x9E3779B97F4A7C15) + np.uint64((column + 1) * 0x632BE59BD9B4E019 % 2**64)
     x = (x ^ (x >> np.uint64(30))) * np.uint64(0xBF58476D1CE4E5B9)
     x = (x ^ (x >> np.uint64(27))) * np.uint64(0x94D049BB133111EB)

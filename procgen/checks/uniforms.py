@@ -13,6 +13,9 @@ from procgen.checks.scores import BINS
 _REACH, _CELLS = 8.5, 1 << 16  # beyond 8.5 a uniform is 0 or 1 in double precision but for 1e-17
 
 
+CELLS_OF_SD = _CELLS / (2 * _REACH)
+
+
 @cache
 def _table() -> tuple[NDArray, NDArray]:
     """Phi at the left end of each cell, and its rise over the cell."""
@@ -22,12 +25,19 @@ def _table() -> tuple[NDArray, NDArray]:
     return values, np.append(np.diff(values), 0.0)
 
 
+@cache
+def lefts() -> NDArray:
+    """The table of Phi for compiled code, its last entry twice: the rise of a cell is the next entry minus its own."""
+    left = _table()[0]
+    return np.append(left, left[-1])
+
+
 def uniforms(g: NDArray) -> NDArray:
     """Phi(g) for scores (steps, paths), NaN where they are; the error is below 3e-9. In memory that is used again."""
     left, rise = _table()
     steps, paths = g.shape
     u, part, place = (scratch(steps, paths, number) for number in (1, 2, 3))
-    np.multiply(g, _CELLS / (2 * _REACH), out=place)
+    np.multiply(g, CELLS_OF_SD, out=place)
     place += _CELLS / 2
     np.clip(place, 0, _CELLS, out=place)
     cell = _whole(place)

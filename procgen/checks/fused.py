@@ -1,0 +1,202 @@
+"""What `shocks`, `structure` and `copies` do with a tile, compiled: each in one pass instead of dozens.
+
+Imported only where kernels are compiled (numba, the extra `speed`), for tiles (steps, paths) of finite values in one
+piece of memory. Every sum adds the same numbers in the same order as the plain form, so that the bits are the same.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+
+from procgen.chance.kernel import compiled_function
+
+BLOCK, STRETCH = 64, 16  # steps, as in `blocks` and `stretches`
+_SIZE = np.int64(2**63 - 1)  # all bits of a double but its sign
+_ENDLESS = np.int64(0x7FF0000000000000)  # the bits of infinity
+_STEEP, _FALL = 6 * np.sqrt(5.0), 0.5 * np.sqrt(5.0)  # of `cluster_scores`
+
+
+@compiled_function
+def scored(g, left, scale, counts, clusters, worst):
+    """Of scores g: their uniforms, counted in bins; cluster scores; and the size of the farthest of each step.
+
+    left: the table of uniforms and its last entry again; scale: cells for one sd.
+    """
+    steps, paths = g.shape
+    cells, bins = float(left.shape[0] - 2), counts.shape[0]
+    u = np.empty(paths)
+    for t in range(steps):
+        row, out, bits = g[t], clusters[t], g[t].view(np.int64)
+        far = np.int64(0)
+        for p in range(paths):
+            place = min(max(row[p] * scale + 0.5 * cells, 0.0), cells)
+            cell = np.int64(place)
+            u[p] = left[cell] + (left[cell + 1] - left[cell]) * (place - cell)
+            far = max(far, bits[p] & _SIZE)
+        for p in range(paths):
+            v = u[p] - 0.5
+            out[p] = v * v * _STEEP - _FALL
+        for p in range(paths):
+            counts[min(np.int64(u[p] * bins), bins - 1)] += 1
+        worst[t] = far
+
+
+@compiled_function
+def summed(g, clusters, steps, lags, cluster_lags, totals, beside, profile, short):
+    """Add products along paths and across them to totals, beside; fill sums by step and by stretch of 16 steps.
+
+    g, clusters (held + steps, paths): views of windows. totals: of g, g², two that are left alone, asymmetry, another
+    such, then by lag.
+    """
+    held, held_too, paths = g.shape[0] - steps, clusters.shape[0] - steps, g.shape[1]
+    block, rest = np.empty(paths), np.empty(2 * paths + BLOCK)
+    for first in range(0, steps, BLOCK):
+        end = min(first + BLOCK, steps)
+        _add(totals[0], g[held + first : held + end], block)
+        _add_products(totals[1], g, held, g, held, first, end, block)
+        _add_products(totals[4], clusters, held_too, g, held - 1, first, end, block)
+        for k in range(lags.shape[0]):
+            _add_products(totals[6 + k], g, held, g, held - lags[k], first, end, block)
+        at = 6 + lags.shape[0]
+        for k in range(cluster_lags.shape[0]):
+            _add_products(totals[at + k], clusters, held_too, clusters, held_too - cluster_lags[k], first, end, block)
+        block[: paths - 1] = 0.0
+        for t in range(held + first, held + end):
+            right, left = g[t][1:], g[t]
+            for p in range(paths - 1):
+                block[p] += right[p] * left[p]
+        for p in range(paths - 1):
+            beside[p] += block[p]
+    for t in range(steps):
+        row = g[held + t]
+        profile[0, t] = _across(row, rest)
+        for p in range(paths):
+            block[p] = row[p] * row[p]
+        profile[1, t] = _across(block, rest)
+    for k in range(short.shape[0]):
+        _halved(g[held + STRETCH * k : held + STRETCH * (k + 1)], short[k])
+
+
+@compiled_function
+def plain_sums(z, totals):
+    """Add z and z² along paths to the third and fourth of the totals."""
+    steps, paths = z.shape
+    block = np.empty(paths)
+    for first in range(0, steps, BLOCK):
+        end = min(first + BLOCK, steps)
+        _add(totals[2], z[first:end], block)
+        _add_products(totals[3], z, 0, z, 0, first, end, block)
+
+
+@compiled_function
+def _add(total, rows, block):
+    paths = total.shape[0]
+    block[:] = 0.0
+    for t in range(rows.shape[0]):
+        row = rows[t]
+        for p in range(paths):
+            block[p] += row[p]
+    for p in range(paths):
+        total[p] += block[p]
+
+
+@compiled_function
+def _add_products(total, a, at, b, bt, first, end, block):
+    """Add a·b, where both are there, summed over the steps of a block; those of step 0 are a[at], b[bt]."""
+    paths = total.shape[0]
+    block[:] = 0.0
+    for t in range(max(first, -bt), end):
+        x, y = a[at + t], b[bt + t]
+        for p in range(paths):
+            block[p] += x[p] * y[p]
+    for p in range(paths):
+        total[p] += block[p]
+
+
+@compiled_function
+def _across(row, rest):
+    """Sum over a row, neighbours first; `rest` has room for twice the row."""
+    n, at, x = row.shape[0], 0, row
+    while n > 1:
+        half = n // 2
+        y = rest[at : at + half + n % 2]
+        for i in range(half):
+            y[i] = x[2 * i] + x[2 * i + 1]
+        if n % 2:
+            y[half] = x[n - 1]
+        n, at, x = half + n % 2, at + half + n % 2, y
+    return x[0]
+
+
+@compiled_function
+def _halved(rows, out):
+    """Sums of sixteen rows, neighbours first."""
+    for p in range(out.shape[0]):
+        out[p] = (
+            ((rows[0][p] + rows[1][p]) + (rows[2][p] + rows[3][p]))
+            + ((rows[4][p] + rows[5][p]) + (rows[6][p] + rows[7][p]))
+        ) + (
+            ((rows[8][p] + rows[9][p]) + (rows[10][p] + rows[11][p]))
+            + ((rows[12][p] + rows[13][p]) + (rows[14][p] + rows[15][p]))
+        )
+
+
+@compiled_function
+def looked(x, weights, prints, low, high):
+    """Add the fingerprints of values x to prints, and fill the extremes of each step; whether all are finite."""
+    steps, paths = x.shape
+    finite = True
+    for t in range(steps):
+        bits, signed = x[t].view(np.uint64), x[t].view(np.int64)
+        least, most = _SIZE, -_SIZE
+        for p in range(paths):
+            prints[p] += (bits[p] ^ (bits[p] >> np.uint64(32))) * weights[t]
+            key = signed[p] ^ ((signed[p] >> 63) & _SIZE)  # ordered as the values are
+            least, most = min(least, key), max(most, key)
+        finite = finite and most < _ENDLESS and least > ~_ENDLESS
+        low[t], high[t] = least ^ ((least >> 63) & _SIZE), most ^ ((most >> 63) & _SIZE)
+    return finite
+
+
+@compiled_function
+def stays(before, x, some):
+    """For each step of x, whether some path has the value of the step before; `before` are the rows before x."""
+    last = before[before.shape[0] - 1]
+    for t in range(x.shape[0]):
+        row, same = x[t], 0
+        for p in range(x.shape[1]):
+            same += row[p] == last[p]
+        some[t] = same > 0
+        last = row
+
+
+@compiled_function
+def marked(before, x, ends, mix, hashes, values, paths, steps):
+    """Fill in the marks of stretches that end in x; how many there are. `before`: the rows of a stretch before x."""
+    reach, lanes, count = before.shape[0], x.shape[1], 0
+    mixed, where = np.empty((3, lanes), np.uint64), np.empty(lanes, np.int64)
+    for t in range(-2, x.shape[0]):
+        bits = (x[t] if t >= 0 else before[reach + t]).view(np.uint64)
+        one, two, three = mixed[t % 3], mixed[(t - 1) % 3], mixed[(t - 2) % 3]
+        for p in range(lanes):
+            one[p] = bits[p] * mix[0]
+        if t < 0:
+            continue
+        found = 0
+        for p in range(lanes):
+            where[found] = p
+            found += one[p] ^ (two[p] >> np.uint64(1)) ^ (three[p] >> np.uint64(2)) <= ends
+        for k in range(found):
+            p = where[k]
+            first = x[t - reach, p] if t >= reach else before[t, p]
+            known, total = first != x[t, p], np.uint64(0)
+            for s in range(t - reach, t + 1):
+                value = x[s, p] if s >= 0 else before[reach + s, p]
+                known = known and np.isfinite(value)
+                bits_of = np.float64(value).view(np.uint64)
+                total = (total ^ bits_of ^ (bits_of >> np.uint64(32))) * mix[1]
+                total ^= total >> np.uint64(29)
+            if known:
+                hashes[count], values[count], paths[count], steps[count] = total, x[t, p], p, t
+                count += 1
+    return count

@@ -1,0 +1,156 @@
+"""Compiled sums have the bits of the plain ones: tiles wide and narrow, cut anywhere, with gaps and without."""
+
+import numpy as np
+import pytest
+
+from procgen.chance import kernel
+from procgen.chance.laws import LAWS
+from procgen.checks import lane as room
+from procgen.checks.copies import Repeats, Watch
+from procgen.checks.lane import Pass
+from procgen.checks.scores import Scores
+from procgen.checks.shocks import MEMORY_LAGS, SHOCK_ARRAYS, ShockSums
+from procgen.checks.structure import _looked
+from procgen.checks.validate import plan_of
+from tests.studies.departures import draw, spec_of
+
+needs_numba = pytest.mark.skipif(not kernel.available(), reason="numba is not installed")
+RNG = np.random.default_rng(8)
+SCORES = {name: Scores(LAWS[name](**given)) for name, given in (("normal", {}), ("student_t", {"df": 6}))}
+CUTS = {"whole": [], "blocks": [64, 192, 256], "anywhere": [1, 3, 64, 129, 300]}
+
+
+def gaps(z):
+    """As z, with nothing known at first, and some values missing on the way."""
+    z = z.copy()
+    z[:20] = np.nan
+    z[150, -1], z[151, :] = np.nan, np.nan
+    return z
+
+
+def same(plain, compiled):
+    assert plain.keys() == compiled.keys()
+    for name, values in plain.items():
+        if isinstance(values, np.ndarray):
+            assert values.dtype == compiled[name].dtype, name
+            np.testing.assert_array_equal(compiled[name], values, err_msg=name, strict=True)
+        else:
+            assert compiled[name] == values, name
+
+
+def both(run):
+    """What a run gives in both forms."""
+    plain = run()
+    with kernel.compiling():
+        compiled = run()
+    return plain, compiled
+
+
+def tiles(x, cuts):
+    return zip([0, *cuts], np.split(x, cuts), strict=True)
+
+
+@needs_numba
+@pytest.mark.parametrize("law", SCORES)
+@pytest.mark.parametrize("cuts", CUTS)
+@pytest.mark.parametrize("paths", [1, 15, 16, 48, 257])
+@pytest.mark.parametrize("period", [None, 90])
+def test_sums_of_shocks(monkeypatch, law, cuts, paths, period):
+    lags = MEMORY_LAGS + ((period,) if period else ())
+    z = np.clip(RNG.standard_normal((400, paths)), -4, 4)
+    z[77, 0], z[301, -1], z[5, 0] = 9.0, -7.5, -0.0
+    used = []
+    original = ShockSums._compiled
+    monkeypatch.setattr(ShockSums, "_compiled", lambda *args: (used.append(1), original(*args))[1])
+
+    def run():
+        found = {}
+        for kind, shocks in (("whole", z), ("gaps", gaps(z))):
+            sums = ShockSums(SCORES[law], 400, lags, period)
+            lane = sums.lane(paths, 32)
+            for first, tile in tiles(shocks, CUTS[cuts]):
+                sums.absorb(tile, first, lane, 3.0 + tile)
+                found[f"{kind} {first}"] = (lane.view.tobytes(), lane.totals.tobytes(), lane.beside.tobytes())
+            sums.finish(lane)
+            found |= {f"{kind} {name}": getattr(sums, name) for name in SHOCK_ARRAYS}
+            facts = sums.n, sums.far, sums.chains, sums.rows, sums.neighbours, sums.outside
+            found[f"{kind} facts"] = facts
+        return found
+
+    plain, compiled = both(run)
+    same(plain, compiled)
+    assert len(used) >= (len(CUTS[cuts]) + 1) * (paths >= 16)
+
+
+@needs_numba
+@pytest.mark.parametrize("cuts", CUTS)
+@pytest.mark.parametrize("paths", [1, 16, 257])
+def test_marks_and_runs_of_values(cuts, paths):
+    x = np.round(RNG.standard_normal((400, paths)), 3)
+    x[100:105, 0] = x[100, 0]  # a value that stays, marked nowhere
+    x[62:66, -1] = -0.0
+    x[200, 0], x[201, -1] = np.nan, np.inf
+
+    def run():
+        watch = Watch(Repeats(1e-6, 1000), 64, paths)
+        for _, tile in tiles(x, CUTS[cuts]):
+            watch.absorb(tile)
+        longest, marks = watch.finish()
+        return {"longest": longest, **dict(zip(("hashes", "values", "paths", "steps"), marks.arrays, strict=True))}
+
+    plain, compiled = both(run)
+    same(plain, compiled)
+    assert plain["longest"][0] >= 4 and len(plain["hashes"]) > 5 * paths
+
+
+@needs_numba
+@pytest.mark.parametrize("wrong", [None, np.nan, np.inf, -np.inf], ids=str)
+def test_fingerprints_and_extremes(wrong):
+    x = RNG.standard_normal((70, 33)) * 10.0 ** RNG.integers(-300, 300, (70, 33))
+    x[3], x[4], x[5, 0] = -np.abs(x[3]), np.abs(x[4]), -0.0
+    if wrong is not None:
+        x[60, 7] = wrong
+
+    def run():
+        prints = np.arange(33, dtype=np.uint64)
+        finite, ends = _looked(x, 640, 2, prints)
+        low, high = ends or (None, None)
+        return {"prints": prints, "finite": finite, "low": low, "high": high}
+
+    plain, compiled = both(run)
+    same(plain, compiled)
+    assert plain["finite"] is (wrong is None)
+    if wrong is None:
+        np.testing.assert_array_equal(compiled["low"], x.min(axis=1))
+        np.testing.assert_array_equal(compiled["high"], x.max(axis=1))
+
+
+@needs_numba
+def test_a_pass_over_an_ensemble(monkeypatch):
+    """All sums of a pass, among them those of pairs; and that it is the number of values that turns it on."""
+    body = {
+        "series": {
+            "x": [{"constant": 2}, {"ar": {"phi": 0.6, "sd": 1}}, {"random_walk": {"sd": 0.2}}],
+            "y": [{"garch": {"sd": 1, "alpha": 0.1, "beta": 0.8}}],
+            "z": [{"white_noise": {"sd": 2, "law": {"student_t": {"df": 5}}}}],
+        },
+        "correlation": [{"between": ["x.ar", "y.garch"], "value": 0.3}],
+    }
+    spec = spec_of(body, 88, 300, 5)
+    values, plan = draw(spec), plan_of(spec)
+    values["x"][5, 130] = np.nan
+    found = []
+    for repays in (10**9, 1):
+        monkeypatch.setattr(room, "COMPILING_REPAYS", repays)
+        one = Pass(plan, compile=room.repays(88 * 300))
+        assert one.compile is (repays == 1)
+        for first, end in ((0, 130), (130, 300)):
+            one.absorb(0, first, {name: x[:, first:end] for name, x in values.items()})
+        facts, arrays = one.total().state()
+        found.append({"facts": facts, **arrays})
+    same(*found)
+
+
+def test_without_numba_it_goes_on_plain(monkeypatch):
+    monkeypatch.setattr(kernel, "available", lambda: False)
+    assert Pass(plan_of(spec_of([{"white_noise": {"sd": 1}}], 16, 64, 1)), compile=True).compile is False
