@@ -10,6 +10,7 @@ import numpy as np
 
 from procgen.chance.kernel import compiled_function
 
+_GRID = 2.0**52  # of uniforms
 LEFT = -1.0  # in place of a count that is not found here
 _ABREAST = 64  # counts that are added up side by side
 _NONE = (-1.0, 0.0, 0.0)  # uniform, mean and chance of none in place of what there are too few of
@@ -87,20 +88,55 @@ def poisson(u, nothing, mean, climb, rare, near, found, most, out):
 
 
 @compiled_function
+def _rare_negative_binomial(wanted, nothing, share, size, ratios, climb, rare, near, found, most):
+    chance, below = nothing, nothing
+    for k in range(climb):
+        more = wanted > below
+        if wanted > rare and below > near:
+            more = _above_negative_binomial(float(k), chance, share, size, found, most) > 1.0 - wanted
+        if not more:
+            return float(k)
+        chance = chance * (ratios[k] * share)
+        below = below + chance
+    return LEFT
+
+
+@compiled_function
 def negative_binomial(u, nothing, share, size, ratios, climb, rare, near, found, most, out):
     """The same, of negative binomial counts; share: mean / (mean + size); ratios: (k - 1 + size) / k from k = 1 on."""
-    for i in range(u.shape[0]):
-        wanted, chance, below, count = u[i], nothing[i], nothing[i], LEFT
+    wanted, each, chance, below = np.empty((4, _ABREAST))
+    count = np.empty(_ABREAST, np.int64)
+    for first in range(0, u.shape[0], _ABREAST):
+        left = min(_ABREAST, u.shape[0] - first)
+        for j in range(_ABREAST):
+            wanted[j], each[j], chance[j] = (u[first + j], share[first + j], nothing[first + j]) if j < left else _NONE
+            below[j], count[j] = chance[j], 0
         for k in range(climb):
-            more = wanted > below
-            if wanted > rare and below > near:
-                more = _above_negative_binomial(float(k), chance, share[i], size, found, most) > 1.0 - wanted
-            if not more:
-                count = float(k)
+            more, ratio = 0, ratios[k]
+            for j in range(_ABREAST):
+                short = np.int64(wanted[j] > below[j])
+                count[j] = count[j] + short
+                more = more + short
+                chance[j] = chance[j] * (ratio * each[j])
+                below[j] = below[j] + chance[j]
+            if more == 0:
                 break
-            chance = chance * (ratios[k] * share[i])
-            below = below + chance
-        out[i] = count
+        for j in range(left):
+            out[first + j] = float(count[j]) if count[j] < climb else LEFT
+            if wanted[j] > rare:
+                out[first + j] = _rare_negative_binomial(
+                    wanted[j], nothing[first + j], each[j], size, ratios, climb, rare, near, found, most
+                )
+
+
+@compiled_function
+def uniforms(z, per_root_12, out):
+    """The uniforms that standardised ones were made of."""
+    for i in range(z.shape[0]):
+        place = np.floor(z[i] * (_GRID * per_root_12)) + 0.5 * _GRID
+        place = 0.0 if place < 0.0 else place
+        place = _GRID - 1.0 if place > _GRID - 1.0 else place
+        out[i] = (place + 0.5) / _GRID
 
 
 @compiled_function

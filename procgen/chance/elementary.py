@@ -190,7 +190,7 @@ def _log1p(x: np.ndarray, out: np.ndarray, scratch: Scratch) -> None:
     above, less, result = scratch(6, n), scratch(7, n), scratch(8, n)
     np.add(x, 1.0, out=above)
     np.subtract(above, 1.0, out=less)
-    log_of(above, result, scratch)
+    _log(above, result, scratch)
     same = np.flatnonzero((less == 0.0) | (above == np.inf))
     less[same] = 1.0
     with np.errstate(invalid="ignore"):

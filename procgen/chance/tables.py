@@ -34,6 +34,11 @@ def uniforms(z: Array) -> Array:
 
 
 def _uniforms(z: Array, out: Array, scratch: Scratch) -> None:
+    if is_compiling():
+        from procgen.chance import compiled_counts
+
+        compiled_counts.uniforms(z, _PER_ROOT_12, out)
+        return
     place = np.add(np.floor(np.multiply(z, GRID * _PER_ROOT_12, out=out), out=out), 2.0**51, out=out)
     np.minimum(np.maximum(place, 0.0, out=out), GRID - 1.0, out=out)
     np.divide(np.add(out, 0.5, out=out), GRID, out=out)
