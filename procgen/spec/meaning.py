@@ -9,13 +9,15 @@ from __future__ import annotations
 import hashlib
 from collections import Counter
 from collections.abc import Iterator, Mapping
-from dataclasses import dataclass, fields
+from dataclasses import dataclass, fields, replace
 from itertools import combinations
 from typing import Any
 
 import numpy as np
 
+from procgen.spec.elapsed import Elapsed
 from procgen.spec.entries import children, named, walk
+from procgen.spec.local import DaySet, Part, YearDay
 from procgen.spec.model import Entry, Series, Shared, Spec
 from procgen.spec.places import plain_at
 from procgen.spec.varying import Varying, replaced
@@ -188,8 +190,16 @@ def _facts(place: str, spec: Spec, entry: Entry, parent: str) -> Facts:
     facts = {place: _Fact((entry.kind, parent), f"{entry.kind} in {parent}" if parent else entry.kind)}
     facts[f"{place}.times"] = _Fact(_named(entry.times, spec), _at(spec, entry, "times", entry.times))
     for name, value in entry.values.items():
+        value = _without_grid(value)
         facts[f"{place}.{name}"] = _Fact(_named(value, spec), _at(spec, entry, name, value))
     return facts
+
+
+def _without_grid(value: Any) -> Any:
+    """Return a value without the grid that it was read on: what differs in that is told once, as the spec's time."""
+    if isinstance(value, Elapsed):
+        return "time"
+    return replace(value, clock=None) if isinstance(value, Part | DaySet | YearDay) else value
 
 
 def _named(value: Any, spec: Spec) -> Any:

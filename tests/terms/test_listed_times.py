@@ -183,7 +183,10 @@ def test_a_start_beside_listed_times_is_refused_where_it_is_set():
 def test_variants_may_list_other_times():
     spec = pg.load(raw(variants={"sparse": {"time.at": texts([0, 60, 300])}}))
     assert spec.variant("sparse").time.steps == 3
-    (change,) = [c for c in changes(spec, spec.variant("sparse")) if c.place == "time.at"]
+    found = {change.place: change for change in changes(spec, spec.variant("sparse"))}
+    rates = {f"series.x.ornstein_uhlenbeck.{name}" for name in ("rate", "sd")}  # per another mean step
+    assert found.keys() == {"time.steps", "time.at", *rates}
+    change = found["time.at"]
     assert change.old.startswith("24 times from 2027-01-04T09:00:00Z to ") and "digest" in change.new
 
 
