@@ -42,7 +42,7 @@ class SpecSource:
     def __init__(self, spec: Any, reveal: tuple[str, ...] = ()):
         from procgen.terms.by_path import deepest
         from procgen.terms.graph import build
-        from procgen.terms.supports import column_type, counted
+        from procgen.terms.supports import counted
 
         self.spec, self.reveal = spec, reveal
         self.graph = build(spec)
@@ -57,13 +57,14 @@ class SpecSource:
         self.columns = [
             Column(
                 s.name,
-                column_type(self.graph, s.name),
+                s.type or ("int64" if whole else "float64"),
                 s.decimals,
                 s.unit,
                 gaps=self.graph.gappy(s.name),
-                counted=counted(self.graph, s.name),
+                counted=whole,
             )
             for s in spec.series.values()
+            for whole in [counted(self.graph, s.name)]
         ]
         self.columns += [Column(name, revealed=True, gaps=self.graph.gappy(name)) for name in reveal]
         self.stamps = spec.time.stamps if spec.time.start is not None else None

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from functools import lru_cache
 from typing import Any
 
 from procgen.terms.combine import Hidden
@@ -54,21 +55,27 @@ def _whole(node: Any, known: dict[int, Support]) -> bool:
 
 def common_support(graph: Any, name: str) -> Support:
     """The support of a series, if parameters that are drawn by path leave it as it is; else everything."""
-    from procgen.spec.model import SpecError
-    from procgen.terms.graph import Graph
-
     support = support_of(graph.series[name])
     if graph.varied is None or not graph.varied.parameters or support.everything:
         return support
+    alike = all(other is not None and support_of(other.series[name]) == support for other in _drawn(graph))
+    return support if alike else EVERYTHING
+
+
+@lru_cache(maxsize=1)  # all series of a spec are asked for one after the other
+def _drawn(graph: Any) -> tuple[Any, ...]:
+    """The graph with low and with high numbers for its parameters; None for one that cannot be."""
+    from procgen.spec.model import SpecError
+    from procgen.terms.graph import Graph
+
+    made: list[Any] = []
     for rank in (0.1, 0.9):
         try:
             values = {key: _at(one.varying.law, rank) for key, one in graph.varied.parameters.items()}
-            other = Graph(graph.varied.at(values))
+            made.append(Graph(graph.varied.at(values)))
         except SpecError:
-            return EVERYTHING
-        if support_of(other.series[name]) != support:
-            return EVERYTHING
-    return support
+            made.append(None)
+    return tuple(made)
 
 
 def _at(law: Any, rank: float) -> float:
