@@ -15,15 +15,17 @@ from typing import Any
 
 import numpy as np
 
+from procgen.spec.calendar import Grid
 from procgen.spec.elapsed import Elapsed
 from procgen.spec.entries import children, named, walk
-from procgen.spec.local import DaySet, Part, YearDay
-from procgen.spec.model import Entry, Series, Shared, Spec
+from procgen.spec.local import DaySet, LocalClock, Part, YearDay
+from procgen.spec.model import Entry, Frozen, Series, Shared, Spec
 from procgen.spec.places import plain_at
 from procgen.spec.varying import Varying, replaced
 
 LONGEST = 80
 Owner = Series | Shared
+_NO_CLOCK = LocalClock(Grid(1))
 
 
 @dataclass(frozen=True)
@@ -199,7 +201,11 @@ def _without_grid(value: Any) -> Any:
     """Return a value without the grid that it was read on: what differs in that is told once, as the spec's time."""
     if isinstance(value, Elapsed):
         return "time"
-    return replace(value, clock=None) if isinstance(value, Part | DaySet | YearDay) else value
+    if isinstance(value, Part | DaySet | YearDay):
+        return replace(value, clock=_NO_CLOCK)
+    if isinstance(value, tuple):
+        return tuple([_without_grid(part) for part in value])
+    return Frozen({key: _without_grid(part) for key, part in value.items()}) if isinstance(value, Mapping) else value
 
 
 def _named(value: Any, spec: Spec) -> Any:
