@@ -10,8 +10,8 @@ import numpy as np
 from procgen.checks import judge
 from procgen.checks.gather import Gather
 from procgen.checks.judge import FEW_PATHS, Sample
-from procgen.checks.limits import limit, sample_of
-from procgen.checks.pools import Changes, Level, Pool
+from procgen.checks.limits import few_paths, limit, sample_of
+from procgen.checks.pools import QUANTILES, Changes, Level, Pool
 from procgen.checks.probes import SeriesPlan
 from procgen.checks.sums import Powers
 from procgen.checks.verdict import Check
@@ -48,6 +48,10 @@ def averages(plan: SeriesPlan, powers: Powers) -> Iterator[Check]:
         place += 1
     if pool.level is not None:
         yield from _level(plan, pool.level, sample_of(powers, place), sample_of(powers, place + 1))
+        place += 2
+    if pool.shares is not None:
+        for k in range(len(pool.shares.points)):
+            yield from _share(plan, pool, k, sample_of(powers, place + k))
     if pool.slow is not None:
         yield from pool.slow.check(plan.name, sample_of(powers, pool.size - 1))
 
@@ -81,12 +85,18 @@ def _hidden(plan: SeriesPlan, pool: Pool, lag: int, slope: float = 0.0) -> float
     as the slope says, and by accident the share p of the rest.
     """
     steps = pool.last - pool.first - max(lag, 0)
-    skew, repeats = plan.skewness(2 if lag == 0 else 1), 1.0
-    found = plan.theory.variance_of_mean(np.array([steps])) if skew and pool.steady else None
-    if found is not None and math.isfinite(found[0]) and plan.drawn[-1] > 0:
-        repeats = max(1.0, steps * float(found[0]) / float(plan.drawn[-1]))
+    skew = plan.skewness(2 if lag == 0 else 1)
+    repeats = _repeats(plan, pool, steps) if skew else 1.0
     pairs = skew * skew / (1.0 + min(abs(slope), 1.0) * skew * skew) if lag > 0 else 1.0
     return skew * math.sqrt(pairs * repeats / steps)
+
+
+def _repeats(plan: SeriesPlan, pool: Pool, steps: int) -> float:
+    """How many steps in a row are about as good as one, for their average."""
+    found = plan.theory.variance_of_mean(np.array([steps])) if pool.steady else None
+    if found is None or not math.isfinite(found[0]) or not plan.drawn[-1] > 0:
+        return 1.0
+    return max(1.0, steps * float(found[0]) / float(plan.drawn[-1]))
 
 
 def _change(plan: SeriesPlan, each: Changes, sample: Sample) -> Check:
@@ -111,6 +121,20 @@ def _level(plan: SeriesPlan, level: Level, spread: Sample, halves: Sample) -> It
     if halves.n:
         what = "slope of path means"
         yield limit(plan, what, f"{probe}, later half on earlier", "memory", halves, level.slope, 2, None)
+
+
+def _share(plan: SeriesPlan, pool: Pool, k: int, sample: Sample) -> Iterator[Check]:
+    """The share of steps below a quantile, averaged over paths."""
+    assert pool.shares is not None
+    what, probe = f"share below the {QUANTILES[k]:.0%} quantile", f"steps {pool.first}–{pool.last - 1}"
+    chance = float(pool.shares.chances[k])
+    if sample.n < FEW_PATHS or not sample.sd > 0.0:
+        yield Check(plan.name, what, probe, "law", chance, chance + sample.mean, outcome="reported",
+                    note=few_paths(sample.n, FEW_PATHS))  # fmt: skip
+        return
+    steps = pool.last - pool.first
+    hidden = (1.0 - 2.0 * chance) / math.sqrt(chance * (1.0 - chance)) * math.sqrt(_repeats(plan, pool, steps) / steps)
+    yield Check.of(plan.name, what, probe, "law", judge.sample_mean(sample, chance, None, hidden))
 
 
 def _neighbours(plan: SeriesPlan, powers: Powers) -> Iterator[Check]:

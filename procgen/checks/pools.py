@@ -3,7 +3,7 @@
 The deviation itself, its square, and lagged products: the products themselves where their law is exact, else what is
 left of them beside the stated slope, x(t) x(t - lag) - slope x(t - lag)^2, whose law is hardly skewed. Where no shocks
 can be recovered there are more lags, and: changes over stretches of steps (Lo & MacKinlay 1988), of what is not
-stationary; how far the averages of paths lie apart, of what is.
+stationary; of what is, how far the averages of paths lie apart, and the shares of steps below quantiles of the law.
 """
 
 from __future__ import annotations
@@ -18,12 +18,14 @@ from numpy.typing import NDArray
 from procgen.checks import rounding
 from procgen.checks.blocks import Window, across, add_products, scratch
 from procgen.checks.slow import Slow, SlowLane, plan_slow
+from procgen.theory.verdict import STRICT
 
 GAUSSIAN_WINDOW = 96  # steps of a pooled statistic with an exact law (its cost grows with the cube)
 WINDOW = 4096  # steps of a pooled statistic without one
 SHORT = (1, 2)  # lags, where recovered shocks say the rest
 SPREAD = (1, 2, 3, 4, 6, 8, 12, 16, 24, 32, 64, 128, 256)  # lags, up to a quarter of the window
 STRETCHES = (8, 32, 128)  # steps of a change
+QUANTILES = (0.05, 0.25, 0.75, 0.95)  # below which shares of steps are counted
 
 
 @dataclass
@@ -52,6 +54,14 @@ class Level:
 
 
 @dataclass
+class Shares:
+    """The share of a path's steps with values below each of some points, where the law is the same at all steps."""
+
+    points: NDArray
+    chances: NDArray
+
+
+@dataclass
 class Pool:
     """Averages over the steps first .. last - 1, minus their theory."""
 
@@ -66,6 +76,7 @@ class Pool:
     coarse: str = ""  # why rounding leaves the averages without a theory
     changes: tuple[Changes, ...] = ()
     level: Level | None = None
+    shares: Shares | None = None
     slow: Slow | None = None
 
     @cached_property
@@ -75,8 +86,9 @@ class Pool:
 
     @property
     def size(self) -> int:
-        """Numbers of a path: the average, those at each lag, of the changes, two of the level, and the slope."""
-        return 1 + len(self.lags) + len(self.changes) + 2 * (self.level is not None) + (self.slow is not None)
+        """Numbers of a path: the average, those at lags, of the changes, two of the level, shares, and the slope."""
+        shares = 0 if self.shares is None else len(self.shares.points)
+        return 1 + len(self.lags) + len(self.changes) + 2 * (self.level is not None) + shares + (self.slow is not None)
 
 
 def plan_pool(plan: Any, steps: int, blind: bool) -> Pool | None:
@@ -105,7 +117,7 @@ def plan_pool(plan: Any, steps: int, blind: bool) -> Pool | None:
         pool.slow = plan_slow(plan.theory, steps, noise(plan.grain))
     if blind and not pool.coarse:
         if plan.theory.stationarity.covariance_stationary:
-            pool.level = _level(plan, steps)
+            pool.level, pool.shares = _level(plan, steps), _shares(plan, first)
         else:
             pool.changes = tuple(filter(None, (_changes(plan, steps, length) for length in STRETCHES)))
     return pool
@@ -204,6 +216,19 @@ def _level(plan: Any, steps: int) -> Level | None:
     return Level(steps - width, steps, mean, whole, plan.gaussian, sd, half, (2 * whole - half) / half)
 
 
+def _shares(plan: Any, step: int) -> Shares | None:
+    """Points between the cells of rounding, of a law without lumps."""
+    theory = plan.theory
+    lumps = theory.discrete or getattr(theory, "lumpy", False)
+    if plan.gaussian or lumps or theory.stationarity.verdict != STRICT or (law := theory.marginal(step)) is None:
+        return None
+    points = np.asarray(law.ppf(np.array(QUANTILES)), float)
+    if plan.grain:
+        points = (np.floor(points / plan.grain) + 0.5) * plan.grain
+    chances = np.asarray(law.cdf(points), float)
+    return Shares(points, chances) if np.isfinite(points).all() and ((chances > 0) & (chances < 1)).all() else None
+
+
 class PoolLane:
     """The sums of one range of paths."""
 
@@ -214,6 +239,7 @@ class PoolLane:
         self.unknown = np.zeros(paths, dtype=bool)
         self.changes = [np.full((len(each.steps), paths), np.nan) for each in pool.changes]
         self.halves = np.zeros((2, paths))
+        self.below = np.zeros((0 if pool.shares is None else len(pool.shares.points), paths))
         self.slow = SlowLane(pool.slow, paths) if pool.slow else None
 
     def absorb(self, x: NDArray, step: int) -> None:
@@ -240,6 +266,9 @@ class PoolLane:
         start, end = max(pool.first - step, 0), min(pool.last - step, len(x))
         if start >= end:
             return
+        if pool.shares is not None:
+            for below, point in zip(self.below, pool.shares.points, strict=True):
+                below += np.count_nonzero(x[start:end] < point, axis=0)
         at = step + start - pool.first  # place of the first new row in the window
         mean = pool.mean[at : at + end - start, None]
         rows = np.subtract(x[start:end], mean, out=scratch(end - start, x.shape[1], 1))
@@ -272,6 +301,8 @@ class PoolLane:
             rows.append(across((change * change).T) / len(change) - each.variance)
         if pool.level is not None:
             rows += self._level(pool.level)
+        if pool.shares is not None:
+            rows += [*(np.where(self.unknown, np.nan, self.below / width) - pool.shares.chances[:, None])]
         if self.slow is not None:
             rows.append(np.where(self.unknown, np.nan, self.slow.averages()))
         return np.array(rows).T

@@ -1,12 +1,14 @@
-"""Gaps between series that wander together: combinations of them that theory calls steady, judged like series.
+"""Combinations of series that are judged like series: gaps between those that wander together, sums of the steady.
 
 A gap is a stated relation of a vector error correction whose components are series, or what is left of two series that
-share a wandering part by `use`. Its theory is that of the combination, its values are formed from the data.
+share a wandering part by `use`. The sum of two steady series, each in its own standard deviations, shows in its memory
+which of them leads and by how many steps, where no shocks of both can be compared. The theory of a combination is that
+of its series, its values are formed from the data.
 """
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass, replace
 from itertools import combinations
 from typing import Any
@@ -18,7 +20,7 @@ from procgen.checks.pools import Pool, PoolLane
 from procgen.checks.probes import SeriesPlan, plan_series
 from procgen.checks.sums import Powers
 from procgen.checks.verdict import Check
-from procgen.checks.words import GAP
+from procgen.checks.words import GAP, TOGETHER
 from procgen.terms.base import Node, signed
 from procgen.terms.combine import Hidden, Scaled, Sum
 from procgen.terms.recover import sources_below
@@ -26,15 +28,18 @@ from procgen.terms.vector import VectorErrorCorrection
 from procgen.theory import SeriesTheory
 from procgen.theory.verdict import GROWS
 
-MOST = 12  # gaps that are looked at
+MOST = 12  # combinations that are looked at
+_LEADS = 12  # steps by which one series may lead another
+_FELT = 1e-6  # a correlation that is more than rounding
 
 
 @dataclass
 class Relation:
-    """One gap: the weight of each series, and its plan as if it were a series."""
+    """One combination: the weight of each series, its plan as if it were a series, and whether it is a gap."""
 
     weights: dict[str, float]
     plan: SeriesPlan
+    gap: bool = True
 
     @property
     def pool(self) -> Pool:
@@ -50,7 +55,7 @@ class Relation:
         return " ".join(signed(w, name) for name, w in self.weights.items()).removeprefix("+ ")
 
     def values(self, tiles: Mapping[str, NDArray]) -> NDArray:
-        """The gap from tiles (steps, paths) of all series."""
+        """The combination from tiles (steps, paths) of all series."""
         total: Any = 0.0
         for name, weight in self.weights.items():
             total = total + weight * tiles[name]
@@ -61,36 +66,64 @@ class Relation:
         from procgen.checks.judge_pools import averages
 
         for row in averages(self.plan, powers):
-            note = "; ".join(filter(None, (f"the gap is {self}", row.note)))
-            yield replace(row, series=self.name, what=row.what + GAP, note=note)
+            note = "; ".join(filter(None, (f"the {'gap' if self.gap else 'sum'} is {self}", row.note)))
+            kind = row.kind if self.gap or row.kind == "level" else "dependence"
+            end = GAP if self.gap else TOGETHER
+            yield replace(row, series=self.name, what=row.what + end, note=note, kind=kind)
 
 
-def plan_relations(graph: Any, theory: Any, steps: int, grains: Mapping[str, float]) -> list[Relation]:
-    """The gaps of a spec whose theory is known and steady; series that do not wander themselves have none."""
+def plan_relations(
+    graph: Any, theory: Any, steps: int, grains: Mapping[str, float], apart: Iterable[tuple[str, str]] = ()
+) -> list[Relation]:
+    """The gaps of a spec whose theory is known and steady, and the sums of pairs of steady series that depend.
+
+    `apart`: pairs of series whose shocks cannot be compared. Series that do not wander themselves have no gap.
+    """
     found: list[Relation] = []
-    for weights in _candidates(graph):
+    candidates = [(weights, True) for weights in _candidates(graph)]
+    candidates += [(weights, False) for pair in apart if (weights := _together(theory, *pair, steps)) is not None]
+    for weights, gap in candidates:
         if len(found) == MOST:
             break
         combined = _combined(theory, weights)
-        if combined is None:
+        if gap and not _is_gap(theory, weights, combined) or combined is None:
             continue
         grain = float(np.sqrt(sum((w * grains[name]) ** 2 for name, w in weights.items())))
         plan = plan_series(" ~ ".join(weights), combined, steps, grain, (), blind=True)
         if plan.pool is not None and not plan.pool.coarse:
-            found.append(Relation(weights, plan))
+            found.append(Relation(weights, plan, gap))
     return found
 
 
 def _combined(theory: Any, weights: Mapping[str, float]) -> SeriesTheory | None:
-    """The theory of a combination, where its series wander and it does not."""
+    """The theory of a combination, where that of its series is known by itself."""
     members = [theory[name] for name in weights]
-    if not all(type(x) is SeriesTheory and x.stationarity.verdict == GROWS for x in members):
+    if not all(type(x) is SeriesTheory for x in members):
         return None
     total, *others = [x.expression * weight for x, weight in zip(members, weights.values(), strict=True)]
     for part in others:
         total = total + part
-    gap = SeriesTheory(" ~ ".join(weights), total)
-    return gap if gap.expression.sources and gap.stationarity.verdict != GROWS else None
+    return SeriesTheory(" ~ ".join(weights), total) if total.sources else None
+
+
+def _is_gap(theory: Any, weights: Mapping[str, float], combined: SeriesTheory | None) -> bool:
+    """Whether series wander and their combination does not."""
+    members = [theory[name].stationarity.verdict == GROWS for name in weights]
+    return combined is not None and all(members) and combined.stationarity.verdict != GROWS
+
+
+def _together(theory: Any, a: str, b: str, steps: int) -> dict[str, float] | None:
+    """Weights by which two steady series have a variance of 1 each, where some steps of both depend on each other."""
+    one, other = theory[a], theory[b]
+    if not all(type(x) is SeriesTheory and x.stationarity.covariance_stationary for x in (one, other)):
+        return None
+    reach = min(_LEADS, steps - 1)
+    at = np.concatenate([np.arange(reach + 1), np.zeros(reach, np.int64)])
+    known = one.variance(0), other.variance(0), theory.cross(a, b).covariance(at, at[::-1])
+    if any(x is None or not np.isfinite(x).all() for x in known):
+        return None
+    sd = np.sqrt([float(known[0]), float(known[1])])
+    return None if np.max(np.abs(known[2])) <= _FELT * sd[0] * sd[1] else {a: 1.0 / sd[0], b: 1.0 / sd[1]}
 
 
 def _candidates(graph: Any) -> Iterator[dict[str, float]]:

@@ -155,7 +155,8 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
     grains = {plan.name: plan.grain for plan in series}
     squares = {name: found for name in unseen if (found := plan_squares(th[name], steps, grains[name])) is not None}
     whole = Plan(steps, series, precision, plan_cross(series, th.cross), routes, pairs, squares, gaps)
-    whole.relations = plan_relations(graph, th, steps, grains)
+    apart = [p for p in combinations(routes, 2) if p not in pairs and not gaps.keys() & set(p)]
+    whole.relations = plan_relations(graph, th, steps, grains, apart)
     return missing.adapted(whole, gaps) if gaps else whole
 
 

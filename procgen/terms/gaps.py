@@ -7,7 +7,7 @@ import numpy as np
 from procgen.spec.declare import Parameter, Real, Span
 from procgen.terms.base import Ahead, Draw, Term, number
 from procgen.terms.combine import OF
-from procgen.terms.flag import UNIFORM, Flag
+from procgen.terms.flag import UNIFORM, Flag, runs
 from procgen.terms.support import BINARY, EVERYTHING
 
 
@@ -75,10 +75,12 @@ class Missing(Term):
 
     @property
     def watched(self):
-        return ("missing",) if self.gap is None else ("missing after missing", "missing after present")
+        return ("missing after missing", "missing" if self.gap is None else "missing after present")
 
     def events(self, values, cell, known, state, at):
-        return self.chain.events(np.where(np.isnan(values), 1.0, 0.0), cell, known, state, at)
+        gone = np.isnan(values)
+        on, off = runs(gone, state, *self.chain.chances, apart=True)
+        return on, *(runs(gone, state, *self.chain.chances, apart=False) if self.gap is None else (off,))
 
     def support(self, body, *inputs):
         return body

@@ -87,6 +87,8 @@ def test_what_is_missing_by_itself_has_its_share_tested():
     verdict = pg.validate(pg.render(other), spec=stated)
     assert verdict.agrees is False and "x: share of missing values: larger than stated" in verdict.to_text()
     assert pg.validate(pg.render(stated), false_alarm=1e-8).agrees
+    gaps = pg.load(HEAD | {"series": {"x": [{"missing": {"of": AR, "share": 0.05, "gap": 1.5}}]}})
+    assert "x: share of gaps that go on: larger than stated" in pg.validate(pg.render(gaps), spec=stated).to_text()
 
 
 def test_values_left_out_for_their_size_are_found():

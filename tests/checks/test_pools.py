@@ -8,9 +8,10 @@ import math
 
 import numpy as np
 import pytest
+from scipy.stats import norm
 
 import procgen as pg
-from procgen.checks.pools import PoolLane
+from procgen.checks.pools import QUANTILES, PoolLane
 from procgen.checks.validate import plan_of
 from tests.studies.departures import Departure, draw, planted, spec_of, verdict
 
@@ -65,8 +66,37 @@ def test_averages_are_those_of_numpy_however_the_steps_are_cut(name):
         z = x[level.first : level.last] - level.mean[:, None]
         a, b = z[: len(z) // 2].mean(axis=0), z[len(z) // 2 :].mean(axis=0)
         expected += [((a + b) / 2) ** 2 - level.variance, a * (b - level.slope * a) / level.half]
+    if pool.shares:
+        window = x[pool.first :]
+        expected += [(window < q).mean(axis=0) - p for q, p in zip(pool.shares.points, pool.shares.chances, strict=True)]
     np.testing.assert_allclose(found.T, expected, rtol=1e-8, atol=1e-11)
     assert bool(pool.changes) is (name != "stationary") and bool(pool.level) is (name == "stationary")
+
+
+def test_shares_below_quantiles_are_those_of_the_law():
+    """Of a mixture of two normal laws, 2/3 and 1/3 of the steps, by SciPy; of rounded values, between their cells."""
+    pool = plan_of(spec_of(stays(2), 8, 300, 1)).series[0].pool
+    mixed = 2 / 3 * norm.cdf(pool.shares.points) + 1 / 3 * norm.cdf(pool.shares.points, 3, 1)
+    np.testing.assert_allclose(mixed, QUANTILES, rtol=1e-6)
+    rounded = {"series": {"x": {"of": stays(2), "decimals": 0}}}
+    shares = plan_of(spec_of(rounded, 8, 300, 1)).series[0].pool.shares
+    np.testing.assert_array_equal(shares.points % 1.0, 0.5)
+    np.testing.assert_allclose(2 / 3 * norm.cdf(shares.points) + norm.cdf(shares.points, 3, 1) / 3, shares.chances)
+
+
+def test_another_law_of_the_same_moments_is_named():
+    """Two states of equal chance at -1 and 1, drawn as one normal law of the same variance and memory."""
+    branches = {
+        name: [{"constant": level, "as": f"{name}_level"}, {"white_noise": {"sd": 1}, "as": f"{name}_noise"}]
+        for name, level in (("low", -1), ("high", 1))
+    }
+    stated = [{"regimes": {"branches": branches, "durations": {"low": 4, "high": 4}}}]
+    drawn = [{"ar": {"phi": 0.5, "total_sd": 1}}, {"white_noise": {"sd": 1}}]
+    answer = verdict(stated, draw(spec_of(drawn, 1000, 200, 1)))
+    rows = {(row.what, row.outcome) for row in answer.rows if row.what.startswith("share below")}
+    assert {("share below the 5% quantile", "departs"), ("share below the 95% quantile", "departs")} <= rows
+    true = verdict(stated, draw(spec_of(stated, 1000, 200, 1)), 1e-8)
+    assert true.agrees
 
 
 def test_an_unknown_value_leaves_its_path_out():

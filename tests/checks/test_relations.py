@@ -86,3 +86,28 @@ def test_true_ensembles_agree(text):
         rows = pg.validate(pg.render(spec_of(text, 120, 100 + seed))).checks
         found += [p for what, p in zip(rows["what"], rows["p"], strict=True) if what.endswith("of the gap")]
     assert len(found) > 100 and min(found) > 1e-6 and 0.35 < np.mean(found) < 0.65
+
+
+LEADS = """\
+shared:
+  f: [{white_noise: {sd: 0.5}}]
+series:
+  a: [{use: f}, {white_noise: {sd: 1}}]
+  b: [{lag: {of: [{use: f}], by: 2}}, {white_noise: {sd: 1, law: laplace}}]
+"""
+
+
+def test_which_of_two_steady_series_leads():
+    (pair,) = plan_of(spec_of(LEADS)).relations
+    total = 1.25  # of each; both in sd add up to 2 + 2 ρ(0), and have ρ(2) = 0.25 / 1.25 once at lag 2
+    assert pair.plan.theory.variance(np.array([9]))[0] == pytest.approx(2.0)
+    assert pair.plan.theory.autocovariance([1, 2, 3]) == pytest.approx([0.0, 0.25 / total, 0.0])
+    right = spec_of(LEADS)
+    line = pg.validate(pg.render(spec_of(LEADS.replace("by: 2", "by: 3"))), spec=right).headline[0]
+    assert line.startswith("a ~ b: dependence: ") and "of the sum of a and b in sd" in line
+    assert pg.validate(pg.render(right), false_alarm=1e-8).agrees
+
+
+def test_series_whose_shocks_are_compared_are_not_added_up():
+    assert plan_of(spec_of(LEADS.replace(", law: laplace", ""))).relations == []
+    assert plan_of(spec_of(LEADS.replace("{use: f}], by", "{white_noise: {sd: 1}, as: own}], by"))).relations == []
