@@ -7,13 +7,14 @@ from typing import ClassVar
 import numpy as np
 
 from procgen.chance.jumps import Jumps
+from procgen.chance.kernel import kernel
 from procgen.chance.laws import LAWS, Normal
 from procgen.chance.portable import exp, log
 from procgen.chance.tables import Poisson, uniforms
 from procgen.spec.declare import Parameter, Real
 from procgen.terms.base import Ahead, Draw, Term, Unknown, number, signed
 from procgen.terms.support import POSITIVE
-from procgen.terms.walk import RandomWalk, accumulate
+from procgen.terms.walk import RandomWalk
 
 UNIFORM, NORMAL = LAWS["uniform"](), Normal()
 DRIFT = Parameter(
@@ -87,6 +88,15 @@ class _Scaled:
         self.peek = lambda i: sd * before.peek(i)
 
 
+@kernel
+def jumping(z, jumps, size, drift, sd, mean, spread, x, out):
+    """Sums from x on of drift + σ z[t] and of the jumps of a step, m each with the standard deviation δ."""
+    for t in range(z.shape[0]):
+        x = x + (drift + sd * z[t] + (jumps[t] * mean + np.sqrt(jumps[t]) * (spread * size[t])))
+        out[t] = x
+    return x
+
+
 class Merton(Term):
     kind = "merton"
     family = "jumps and prices"
@@ -128,14 +138,14 @@ class Merton(Term):
 
     def recurse(self, inputs, state, at):
         z, count, size = inputs
-        jumps = Poisson(self.rate).counts(uniforms(count))
-        a = self.step_drift() + self.sd * z + (jumps * self.jump_mean + np.sqrt(jumps) * (self.jump_sd * size))
-        if "x" not in state:  # step 0 is the start itself
-            a[0], jumps[0] = 0.0, 0.0
-        x = state["x"][0] if "x" in state else np.zeros(a.shape[1])
-        logs = np.empty_like(a)
-        state = {"x": accumulate(a, logs, x)[None, :]}
-        return {"": self.start * exp(logs), "jumps": jumps}, state
+        jumps, first = Poisson(self.rate).counts(uniforms(count)), int("x" not in state)
+        logs = np.empty_like(jumps)
+        logs[:first], jumps[:first] = 0.0, 0.0  # step 0 is the start itself
+        x = np.zeros(jumps.shape[1]) if first else state["x"][0]
+        numbers = self.step_drift(), self.sd, self.jump_mean, self.jump_sd
+        x = jumping(*(rows[first:] for rows in (z, jumps, size)), *numbers, x, logs[first:])
+        prices = exp(logs, out=logs)
+        return {"": np.multiply(prices, self.start, out=prices), "jumps": jumps}, {"x": x[None, :]}
 
     def change(self, steps=1):
         """The law of the logarithm's change over some steps."""
