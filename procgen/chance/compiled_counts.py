@@ -130,6 +130,26 @@ def negative_binomial(u, nothing, share, size, ratios, climb, rare, near, found,
 
 
 @compiled_function
+def looked_up(u, low, open_, places, shift, first, out):
+    """The least numbers that are enough for uniforms u, by the guide of a `Table`, or by halves."""
+    last = low.shape[0] - 1
+    for i in range(u.shape[0]):
+        place = np.int64(np.floor(u[i] * _GRID))
+        cell = min(max(place >> shift, 0), last)
+        found = low[cell]
+        if open_[cell]:
+            a, b = 0, places.shape[0]
+            while a < b:
+                middle = (a + b) >> 1
+                if places[middle] <= place:
+                    a = middle + 1
+                else:
+                    b = middle
+            found = float(a)
+        out[i] = found + first
+
+
+@compiled_function
 def uniforms(z, per_root_12, out):
     """The uniforms that standardised ones were made of."""
     for i in range(z.shape[0]):

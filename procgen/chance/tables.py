@@ -67,6 +67,11 @@ class Table:
 
     def _looked_up(self, u: Array, out: Array, scratch: Scratch) -> None:
         n, (low, open_) = len(u), self.guide
+        if is_compiling():
+            from procgen.chance import compiled_counts
+
+            compiled_counts.looked_up(u, low, open_, self.places, _SHIFT, self.first, out)
+            return
         place, cell = scratch(0, n, np.int64), scratch(1, n, np.int64)
         np.copyto(place, np.floor(np.multiply(u, GRID, out=out), out=out), casting="unsafe")
         np.right_shift(place, _SHIFT, out=cell)

@@ -6,7 +6,7 @@ import pytest
 from procgen.chance.elementary import exp, log, log1p
 from procgen.chance.kernel import compiling
 from procgen.chance.laws import Uniform
-from procgen.chance.tables import uniforms
+from procgen.chance.tables import Poisson, uniforms
 
 pytest.importorskip("numba", reason="the extra `speed` compiles them")
 
@@ -51,6 +51,17 @@ def test_uniforms_of_standardised_ones():
     same_bits(uniforms, z)
     same_bits(uniforms, np.array([-9.0, 9.0, np.inf, -np.inf]))
     assert np.array_equal(uniforms(z)[: len(u)], u)
+
+
+@pytest.mark.parametrize("mean", [1e-4, 0.7, 40.0, 5000.0])
+def test_counts_by_a_table(mean):
+    table = Poisson(mean).table
+    ends = [2.0**-53, 1.0 - 2.0**-53, *((table.places[:50] + 0.5) / 2.0**52), *((table.places[:50] - 0.5) / 2.0**52)]
+    u = np.concatenate([RNG.random(40_000), ends])
+    u = u[(u > 0.0) & (u < 1.0)]
+    with compiling():
+        compiled = table.counts(u)
+    assert np.array_equal(compiled, table.counts(u))
 
 
 def test_compiled_division_by_nothing_is_as_the_plain_one():
