@@ -5,7 +5,9 @@ Paths begin one by one, each from the graph of its own spec, and then run side b
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+import gc
+from collections.abc import Iterator, Sequence
+from contextlib import contextmanager
 from itertools import pairwise
 from typing import Any
 
@@ -21,6 +23,18 @@ from procgen.terms.stack import Stack
 from procgen.terms.varied import Varied
 
 FEW = 16  # steps before step 0 that are drawn for all paths at once
+
+
+@contextmanager
+def uncollected() -> Iterator[None]:
+    """Without Python's search for unused cycles, which goes through all graphs again and again while they are made."""
+    was = gc.isenabled()
+    gc.disable()
+    try:
+        yield
+    finally:
+        if was:
+            gc.enable()
 
 
 class PartRun(Run):
@@ -78,8 +92,9 @@ class ByPath:
         changes = np.any(np.diff(np.array([*self._rows.values()]), axis=1) != 0.0, axis=0)
         self._edges = [0, *(np.flatnonzero(changes) + 1).tolist(), paths]
         self._whole = Run(self._make(0), first_path, paths, reveal)
-        self._runs = [self._run(start, end) for start, end in pairwise(self._edges)]
-        self._nodes = self._stack()
+        with uncollected():
+            self._runs = [self._run(start, end) for start, end in pairwise(self._edges)]
+            self._nodes = self._stack()
 
     def _make(self, place: int) -> Graph:
         values = {name: float(row[place]) for name, row in self._rows.items()}
@@ -130,7 +145,8 @@ class ByPath:
     def tile(self, steps: int) -> dict[str, Array]:
         """The next `steps` steps of every series: name to float64 (steps, paths)."""
         if self._runs and not self._whole._states:
-            self._begin()
+            with uncollected():
+                self._begin()
         self._runs, self._drawn = [], {}
         return self._whole.tile(steps)
 

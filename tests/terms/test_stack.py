@@ -97,3 +97,13 @@ def test_these_run_as_rows(name):
     runner = run(build(spec_of(varied(BODIES[name], at))), 0, PATHS)
     stacks = [node.term for node, _ in runner._nodes]
     assert stacks and all(isinstance(stack, Stack) and stack.one is not None for stack in stacks)
+
+
+def test_the_search_for_cycles_goes_on_after_the_graphs_are_made():
+    import gc
+
+    assert gc.isenabled()
+    runner = run(build(spec_of(varied(BODIES["ar1"], next(iter(places(BODIES["ar1"])))))), 0, PATHS)
+    assert gc.isenabled()
+    runner.tile(3)
+    assert gc.isenabled()
