@@ -147,7 +147,7 @@ class ByPath:
         if self._runs and not self._whole._states:
             with uncollected():
                 self._begin()
-        self._runs, self._drawn = [], {}
+        self._runs, self._drawn, self._graphs, self._nodes = [], {}, {}, []
         return self._whole.tile(steps)
 
     def state(self) -> dict[str, Array]:
