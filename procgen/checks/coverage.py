@@ -6,7 +6,7 @@ from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
-from procgen.checks.words import joined
+from procgen.checks.words import START, joined
 
 if TYPE_CHECKING:
     from procgen.checks.verdict import Check
@@ -61,7 +61,8 @@ def coverage(rows: Sequence[Check], about: Mapping[str, Any]) -> list[Coverage]:
 def _of(series: str, rows: Sequence[Check], about: Mapping[str, Any]) -> Coverage:
     if all(_known(row) for row in rows):
         return Coverage(series, (), {}, still=any(row.outcome != "untestable" for row in rows))
-    seen = {row.kind for row in rows if row.outcome in ("agrees", "departs") and not _known(row)}
+    # a start beside its end says nothing of the size of either
+    seen = {row.kind for row in rows if row.outcome in ("agrees", "departs") and not _known(row) and row.what != START}
     if any(row.what == "law" and row.outcome in ("agrees", "departs") for row in rows):
         seen |= {"level", "spread"}  # the whole law is stated, its mean and variance with it
     missing = {side: _why(side, rows) for side in _wanted(series, about) if side not in seen}
