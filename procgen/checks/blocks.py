@@ -13,8 +13,11 @@ from collections.abc import Sequence
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.chance.kernel import is_compiling
+
 BLOCK = 64  # steps
 GROUP = 16  # paths: a lane group of the ensemble, the finest cut between two parts
+WIDE = 32  # paths from which on compiled passes are worth their calls (measured: at 16 neither form is quicker)
 _local = threading.local()
 
 
@@ -25,6 +28,11 @@ def scratch(steps: int, paths: int, number: int = 0) -> NDArray:
     if number not in kept or kept[number].size < size:
         kept[number] = np.empty(size)
     return kept[number][:size].reshape(steps, paths)
+
+
+def compiled(paths: int) -> bool:
+    """Whether tiles of so many paths go through compiled passes."""
+    return is_compiling() and paths >= WIDE
 
 
 def across(x: NDArray) -> NDArray:
@@ -54,6 +62,12 @@ def add_products(total: NDArray, a: NDArray, b: NDArray | None = None, offset: i
 
 def _summed(total: NDArray, factors: Sequence[NDArray], offset: int) -> NDArray:
     steps, paths = factors[0].shape
+    if compiled(paths) and all(x.flags.c_contiguous for x in factors):
+        from procgen.checks import fused
+
+        new = total.copy()
+        fused.add_products(new, factors[0], factors[-1], len(factors) > 1, offset)
+        return new
     head = min(-offset % BLOCK, steps)
     middle = head + (steps - head) // BLOCK * BLOCK
     for start, end in ((0, head), (head, middle), (middle, steps)):

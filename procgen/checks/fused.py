@@ -89,6 +89,20 @@ def plain_sums(z, totals):
 
 
 @compiled_function
+def add_products(total, a, b, both, offset):
+    """Add a·b (or a, unless `both`) to total, in blocks, where the rows begin `offset` steps after a block."""
+    steps, first = a.shape[0], 0
+    block = np.empty(total.shape[0])
+    while first < steps:
+        end = min(first + BLOCK - (first + offset) % BLOCK, steps)
+        if both:
+            _add_products(total, a, 0, b, 0, first, end, block)
+        else:
+            _add(total, a[first:end], block)
+        first = end
+
+
+@compiled_function
 def _add(total, rows, block):
     paths = total.shape[0]
     block[:] = 0.0

@@ -13,9 +13,8 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
-from procgen.chance.kernel import is_compiling
 from procgen.checks import farthest
-from procgen.checks.blocks import GROUP, Window, across, add_lagged, add_products, scratch
+from procgen.checks.blocks import GROUP, Window, across, add_lagged, add_products, compiled, scratch
 from procgen.checks.scores import BINS, Scores, cluster_scores
 from procgen.checks.stretches import LENGTHS, StretchLane, StretchSums
 from procgen.checks.uniforms import bin_counts, uniforms
@@ -109,9 +108,9 @@ class ShockSums:
         lane.length += len(z) if whole else known.sum(axis=0)
         self.outside += self.scores.outside(z)
         g = self.scores.normal_scores(z)
-        compiled = whole and not offset and is_compiling() and z.shape[1] >= GROUP and lane.sound()
+        at_once = whole and not offset and compiled(z.shape[1]) and lane.sound()
         lane.clean = lane.clean + len(z) if whole else 0
-        if compiled:
+        if at_once:
             self._compiled(z, g, first_step, lane, z if x is None else x)
             return
         self.far = farthest.farthest(g, z, z if x is None else x, lane.first_path, first_step + offset, self.far)

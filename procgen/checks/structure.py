@@ -9,8 +9,8 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
-from procgen.chance.kernel import is_compiling
 from procgen.checks import copies, extremes, support
+from procgen.checks.blocks import compiled
 from procgen.checks.verdict import Check
 
 _AT_ONCE = 1 << 14  # values of a fingerprint: what is computed on the way stays in the cache
@@ -225,7 +225,7 @@ def _looked(
     x: NDArray, first_step: int, column: int, prints: NDArray[np.uint64]
 ) -> tuple[bool, tuple[NDArray, NDArray] | None]:
     """Whether all values are finite, and if so, the extremes of each step; their fingerprints are added to `prints`."""
-    if is_compiling():
+    if compiled(x.shape[1]):
         from procgen.checks import fused
 
         low, high = np.empty((2, len(x)), dtype=np.int64)

@@ -6,6 +6,7 @@ import pytest
 from procgen.chance import kernel
 from procgen.chance.laws import LAWS
 from procgen.checks import lane as room
+from procgen.checks.blocks import WIDE, add_products
 from procgen.checks.copies import Repeats, Watch
 from procgen.checks.lane import Pass
 from procgen.checks.scores import Scores
@@ -53,7 +54,7 @@ def tiles(x, cuts):
 @needs_numba
 @pytest.mark.parametrize("law", SCORES)
 @pytest.mark.parametrize("cuts", CUTS)
-@pytest.mark.parametrize("paths", [1, 15, 16, 48, 257])
+@pytest.mark.parametrize("paths", [1, 15, 32, 48, 257])
 @pytest.mark.parametrize("period", [None, 90])
 def test_sums_of_shocks(monkeypatch, law, cuts, paths, period):
     lags = MEMORY_LAGS + ((period,) if period else ())
@@ -79,12 +80,12 @@ def test_sums_of_shocks(monkeypatch, law, cuts, paths, period):
 
     plain, compiled = both(run)
     same(plain, compiled)
-    assert len(used) >= (len(CUTS[cuts]) + 1) * (paths >= 16)
+    assert len(used) >= (len(CUTS[cuts]) + 1) * (paths >= WIDE)
 
 
 @needs_numba
 @pytest.mark.parametrize("cuts", CUTS)
-@pytest.mark.parametrize("paths", [1, 16, 257])
+@pytest.mark.parametrize("paths", [1, 32, 257])
 def test_marks_and_runs_of_values(cuts, paths):
     x = np.round(RNG.standard_normal((400, paths)), 3)
     x[100:105, 0] = x[100, 0]  # a value that stays, marked nowhere
@@ -154,3 +155,18 @@ def test_a_pass_over_an_ensemble(monkeypatch):
 def test_without_numba_it_goes_on_plain(monkeypatch):
     monkeypatch.setattr(kernel, "available", lambda: False)
     assert Pass(plan_of(spec_of([{"white_noise": {"sd": 1}}], 16, 64, 1)), compile=True).compile is False
+
+
+@needs_numba
+@pytest.mark.parametrize("offset", [0, 5, 63])
+@pytest.mark.parametrize("steps", [1, 59, 64, 400])
+def test_products_of_two(offset, steps):
+    a, b = RNG.standard_normal((2, steps, 40))
+    a[0, 3], b[-1, 4] = np.nan, np.inf
+
+    def run():
+        one, two = np.full((2, 40), 0.1)
+        counts = add_products(one, a, None, offset), add_products(two, a, b, offset)
+        return {"one": one, "two": two, "counts": counts}
+
+    same(*both(run))
