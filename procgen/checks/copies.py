@@ -178,8 +178,11 @@ class Watch:
     def _mark(self, rows: NDArray) -> None:
         mixed = rows[self.length - 3 :].view(np.uint64) * _MIX[0]
         # of the last three values: where they are rounded, single ones are too few to choose among
-        end = mixed[2:] ^ (mixed[1:-1] >> np.uint64(1)) ^ (mixed[:-2] >> np.uint64(2))
-        step, path = np.nonzero(end <= self.ends)
+        end = mixed[1:-1] >> np.uint64(1)
+        end ^= mixed[2:]
+        mixed >>= np.uint64(2)
+        end ^= mixed[:-2]
+        step, path = np.divmod(np.flatnonzero(end <= self.ends), rows.shape[1])
         grams = rows[step[:, None] + np.arange(self.length), path[:, None]]
         moving = np.isfinite(grams).all(axis=1) & (grams[:, 0] != grams[:, -1])  # a value that stays is told as one
         step, path, grams = step[moving], path[moving], grams[moving]

@@ -25,7 +25,7 @@ from procgen.checks.tree import Tree, ranges
 from procgen.ensemble.plan import Block
 
 TILE = 1 << 16  # values of one series in a tile: half of a second-level cache
-COMPILING_REPAYS = 24_000_000  # values of one process, some 20 ns each; loading what is compiled takes half a second
+COMPILING_REPAYS = 40_000_000  # values of one process, 15 to 25 ns each; loading what is compiled takes half a second
 
 Tick = Callable[[int], None]  # rows just summed; may raise to stop the work
 Progress = Callable[[int, int], None]  # rows done, rows in all
