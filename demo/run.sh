@@ -3,6 +3,7 @@
 set -eu
 cd "$(dirname "$0")/.."
 sh tests/venv.sh
+unset PYTHONDONTWRITEBYTECODE  # or each command compiles the package for itself
 procgen=.venv/bin/procgen
 out=build/demo
 rm -rf "$out"

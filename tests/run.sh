@@ -4,6 +4,7 @@
 set -eu
 cd "$(dirname "$0")/.."
 sh tests/venv.sh test
+unset PYTHONDONTWRITEBYTECODE  # or each of the many processes compiles the package for itself
 
 failed=0
 .venv/bin/ruff check . || failed=1
