@@ -138,6 +138,8 @@ def _ahead(facts: dict[str, Any]) -> list[str]:
     """Variances of forecast errors; those that all parts' pasts would leave, where these tell more."""
     values, parts = facts["values"], facts["given_parts"]
     same = values is None or parts is None or np.allclose(values, parts, rtol=1e-9, atol=0.0)
+    if facts["given_record"]:
+        return _table("steps after the record", facts["horizons"], [("error variance", values)])
     linear = "error variance" if parts is not None else "error variance, linear"  # of the best linear forecast
     rows = [(linear, values), ("seeing all parts", None if same and values else parts)]
     return _table("steps ahead", facts["horizons"], rows)

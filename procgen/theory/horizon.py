@@ -10,6 +10,9 @@ form: theta and sigma^2 factor the spectral density of the joint numerator (`the
 filter settles to, whatever it started from (Harvey 1989, ch. 3); for components of a system it is computed as such
 (`theory.filtering`). Where a series is no linear function of shocks its spectral density is added up from its
 autocovariances. For Gaussian series these are the best forecasts there are, for others the best linear ones.
+
+A series that leaves from a recorded past has steps 0, 1, .. ahead of it: its forecast error there is what its spec
+leaves to chance, its variance at those steps.
 """
 
 from __future__ import annotations
@@ -80,6 +83,14 @@ def variance_given_values(x: Expression, horizons: np.ndarray) -> np.ndarray:
         return error_variance(system_of(x.space, (x.linear,)), horizons, "values")
     variance, ratio = wold(x.space, x.linear)
     return variance * np.cumsum(_series(ratio).upto(last) ** 2)[horizons - 1]
+
+
+def variance_given_record(x: Expression, horizons: np.ndarray, given: str) -> np.ndarray:
+    """Variance of the forecast error at horizons >= 1 after the record that a series leaves from: at steps h - 1."""
+    _last(horizons)
+    if given == "parts":
+        raise Unknown("the series leaves from a recorded past, and that is what is given: ask with the values given")
+    return np.maximum(x.covariance(x, horizons - 1, horizons - 1), 0.0)
 
 
 def _by_spectrum(x: Expression, last: int) -> np.ndarray:

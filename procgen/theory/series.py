@@ -32,9 +32,9 @@ class SeriesTheory:
     Steps and lags are int64 arrays of any shape, steps from 0 on; answers have the shape asked for.
     """
 
-    def __init__(self, name: str, expression: Expression):
-        self.name = name
-        self.expression = expression
+    def __init__(self, name: str, expression: Expression, recorded: bool = False):
+        self.name, self.expression = name, expression
+        self.recorded = recorded  # whether it leaves from a recorded past, its own or that of what it is made of
         self._reasons: dict[str, str] = {}
 
     def __repr__(self) -> str:
@@ -192,13 +192,16 @@ class SeriesTheory:
 
         `given` is what is known of the past: the series' own "values", or the shocks of all its "parts", which tell
         more where there are several and the series is linear in them. Where conditional variances move it is their
-        mean. Source: Box & Jenkins (1970), ch. 5; Harvey (1989), ch. 3; Kolmogorov (1941).
+        mean. A series that leaves from a recorded past (`recorded`) is forecast from there: the error h steps ahead
+        has its variance at step h - 1. Source: Box & Jenkins (1970), ch. 5; Harvey (1989), ch. 3; Kolmogorov (1941).
         """
         if given not in ("values", "parts"):
             raise ValueError(f"expected `given` to be values or parts, got {given!r}")
+        h, x = _counted("horizons", horizons), self.expression
+        if self.recorded:
+            return self._try("forecast_variance", lambda: horizon.variance_given_record(x, h, given))
         answer = horizon.variance_given_values if given == "values" else horizon.variance_given_parts
-        h = _counted("horizons", horizons)
-        return self._try("forecast_variance", lambda: answer(self.expression, h))
+        return self._try("forecast_variance", lambda: answer(x, h))
 
     def forecast(self, horizons, history: Sequence[float] = (), from_step: int = 0) -> Forecast | None:
         """Mean and variance of what comes h >= 1 steps after `history`, the values at from_step, from_step + 1, ..
@@ -272,6 +275,7 @@ class SeriesTheory:
             },
             "forecast_variance": {
                 "horizons": list(horizons),
+                "given_record": self.recorded,
                 "given_parts": parts,
                 "values": plain(self.forecast_variance(horizons)),
             },

@@ -180,8 +180,17 @@ def theory(spec: Any, graph: Any = None) -> Theory:
     axis = Axis(spec.time.steps * graph.pace, correlation)
     axis.space.ties = ties
     memo: dict[int, Expression] = {}
-    series = {name: SeriesTheory(name, _moments(axis, graph.series[name], memo)) for name in spec.series}
+    series = {}
+    for name in spec.series:
+        series[name] = SeriesTheory(name, _moments(axis, graph.series[name], memo), _recorded(graph, name))
     return Theory(series, tuple(names), axis, graph)
+
+
+def _recorded(graph: Any, name: str) -> bool:
+    """Whether a series leaves from a recorded past: its own, that of a term, or that of a series that it uses."""
+    nodes = [node for node in graph.order([graph.series[name]]) if hasattr(node, "term")]
+    before = any(node.term.values.get("before") is not None for node in nodes)
+    return before or any(node.name.partition(".")[0] in graph.left for node in nodes)
 
 
 def _ties(graph: Any) -> Iterator[tuple[frozenset[str], Tie]]:

@@ -306,6 +306,31 @@ def test_lags_read_the_record_where_it_is_the_past_of_the_series():
         build(pg.load(data))
 
 
+def test_errors_ahead_of_a_record_are_those_of_the_fan():
+    """GARCH variances as in Engle (1982) and Bollerslev (1986): E h[k + 1] = ω + (α + β) E h[k]; the rest by hand."""
+    record, garch = [0.2, -0.5, 1.0, -6, 8, -7], {"garch": {"omega": 0.05, "alpha": 0.1, "beta": 0.85}}
+    series = {
+        "r": {"of": [garch], "before": record},
+        "walk": {"of": [{"random_walk": {"sd": 2}}], "before": record},
+        "user": [{"use": "walk"}, {"white_noise": {"sd": 3}}],
+        "late": [{"lag": {"by": 1, "of": [{"use": "own"}]}}],
+        "own": [{"ar": {"phi": 0.5, "sd": 3, "before": {"x": 16}}}],
+        "free": [{"ar": {"phi": 0.5, "sd": 3}}],
+    }
+    th = pg.theory({"procgen": 1, "seed": 5, "paths": 2, "time": {"steps": 20}, "series": series})
+    h = 1.0
+    for e in record:
+        h = 0.05 + 0.1 * e * e + 0.85 * h
+    expected = {"r": [h, 0.05 + 0.95 * h], "walk": [4, 8], "user": [13, 17], "late": [0, 9], "own": [9, 11.25]}
+    for name, values in expected.items():
+        assert th[name].recorded
+        np.testing.assert_allclose(th[name].forecast_variance([1, 2]), values, rtol=1e-12, atol=1e-12)
+    assert th["r"].forecast_variance([1], given="parts") is None and "recorded" in th["r"].reason("forecast_variance")
+    told = th.as_dict([0, 1], 1, horizons=(1, 2))["series"]
+    assert told["walk"]["forecast_variance"]["given_record"] and not told["free"]["forecast_variance"]["given_record"]
+    assert th["free"].forecast_variance([2]).tolist() == [11.25]
+
+
 def test_a_cycle_leaves_from_a_stated_place():
     """ψ and ψ* turn by λ and shrink by ρ a step (Harvey 1989, 2.3.3), variance σ²(1 − ρ²ᵏ)/(1 − ρ²) after k steps."""
     spec = pg.load(
