@@ -7,6 +7,8 @@ import shutil
 from pathlib import Path
 
 import numpy as np
+import pyarrow as pa
+import pyarrow.parquet as pq
 import pytest
 from scipy import stats
 from typer.testing import CliRunner
@@ -347,3 +349,57 @@ def test_what_cannot_be_expected_is_refused_before_anything_is_drawn(folder, tmp
 def test_one_digest_is_not_that_of_all_variants(folder, tmp_path):
     result = Result("render", folder / "spec.yaml", "--variant", "all", "-o", tmp_path / "b", "--expect", "0" * 64)
     assert result.code == 2 and not (tmp_path / "b").exists()
+
+
+def _rewritten(file: Path, change) -> None:
+    """The file with a changed table, its metadata as they were."""
+    table = pq.read_table(file)
+    frame = table.to_pandas()
+    pq.write_table(pa.Table.from_pandas(change(frame), table.schema, preserve_index=False), file)
+
+
+def _other_value(name: str):
+    def change(frame):
+        frame.loc[(frame["path"] == 3) & (frame["step"] == 17), name] += 1.0
+        return frame
+
+    return change
+
+
+@pytest.fixture
+def copy(folder, tmp_path) -> Path:
+    """The ensemble base with a revealed column, as `a`, and a copy `b` of it to be damaged; the file of `b`."""
+    assert Result("render", folder / "spec.yaml", "--reveal", "load.ar", "-o", tmp_path / "a").code == 0
+    shutil.copytree(tmp_path / "a", tmp_path / "b")
+    return next((tmp_path / "b").glob("*.parquet"))
+
+
+@pytest.mark.parametrize("column", ["load", "load.ar"])
+def test_a_value_that_was_changed_is_told_though_manifests_agree(copy, column):
+    _rewritten(copy, _other_value(column))
+    result = Result("difference", copy.parents[1] / "a", copy.parent)
+    found = pg.difference(copy.parents[1] / "a", copy.parent)
+    assert result.code == 1 and not found.equal and found.to_dict()["equal"] is False
+    assert "b does not hold what its manifest says: " in result.out
+    assert f"the first is series {column}, path 3, step 17\n" in result.out
+    assert ("Series: all equal (" in result.out) == (column == "load.ar")  # what is revealed is no series
+    assert len(found.damages) == 1 and found.damages[0] == found.to_dict()["damages"][0]
+    assert pg.difference(copy.parent, copy.parents[1] / "a").damages[0].startswith("a does not hold")
+
+
+DAMAGES = [
+    lambda file: file.write_bytes(file.read_bytes()[:1000]),
+    lambda file: _rewritten(file, lambda frame: frame.drop(index=77)),
+    lambda file: _rewritten(file, lambda frame: frame.iloc[[*range(len(frame)), 5]]),
+    lambda file: _rewritten(file, lambda frame: frame.sample(frac=1.0, random_state=1)),
+]
+
+
+@pytest.mark.parametrize("damage", DAMAGES, ids=["cut", "a row less", "a row more", "shuffled"])
+def test_a_damaged_file_is_named_and_nothing_said_to_be_equal(copy, damage):
+    damage(copy)
+    result = Result("difference", copy.parents[1] / "a", copy.parent)
+    assert result.code == 1 and "Series: 2 not compared, 0 equal (values could not be read" in result.out
+    assert "b does not hold what its manifest says: " in result.out and result.out.count(copy.name) == 1
+    data = json.loads(Result("difference", copy.parents[1] / "a", copy.parent, "--json").out)
+    assert data["equal"] is False and [one["state"] for one in data["series"]] == ["unread", "unread"]

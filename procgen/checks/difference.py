@@ -8,6 +8,7 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
+from procgen.checks.held import broken
 from procgen.checks.paired import Paired, Sums
 from procgen.ensemble.beside import First, common, note, side_by_side
 from procgen.ensemble.ensemble import Ensemble, open_ensemble
@@ -52,7 +53,7 @@ class SeriesDifference:
     name : str
     state : str
         "equal", "differs", "new" (only in b), "gone" (only in a) or "renamed" (the same recipe and draws, in a
-        under the name `was`).
+        under the name `was`); "unread" where damage kept values from being compared.
     first : First or None
         The first value that differs, by path and then by step: `.path`, `.step`, `.a`, `.b`; None where specs alone
         were compared.
@@ -87,6 +88,8 @@ class Difference:
     paired : tuple of Paired
         Means, paired mean change, standard error, correlation and share of variance saved, by series and step, of
         series that differ and share shocks.
+    damages : tuple of str
+        What of an ensemble is not what its manifest says, where that came to light.
     """
 
     a: Side
@@ -95,11 +98,13 @@ class Difference:
     series: tuple[SeriesDifference, ...]
     compared: Block | None
     paired: tuple[Paired, ...] = ()
+    damages: tuple[str, ...] = ()
 
     @property
     def equal(self) -> bool:
-        """Whether both mean the same, and have the same series with the same values."""
-        return not self.meaning and all(one.state == "equal" for one in self.series) and self.a.whole == self.b.whole
+        """Whether both mean the same, and have the same series with the same values, undamaged."""
+        same = not self.meaning and all(one.state == "equal" for one in self.series)
+        return same and not self.damages and self.a.whole == self.b.whole
 
     @property
     def table(self) -> Any:
@@ -128,6 +133,7 @@ class Difference:
             ],
             "compared": None if block is None else dict(vars(block)),
             "paired": [row.row() for row in self.paired],
+            "damages": list(self.damages),
         }
 
     def to_json(self) -> str:
@@ -153,9 +159,9 @@ def difference(a: Any, b: Any, at: Sequence[int] | None = None, progress: Tick |
     at : steps of the paired figures; a handful over the length when None.
     progress : called with (rows read, rows in all).
 
-    Values of series whose digests are the same in both manifests are not read; `check_digest` holds files against
-    their manifests. Raises SpecError, EnsembleError, TypeError when a or b cannot be read, ValueError when a step of
-    `at` is not in both.
+    Values are read, whatever digests the manifests record; those of revealed columns that both have, too. Where they
+    differ without a reason, or cannot be read, both are held against their manifests (`.damages`). Raises SpecError,
+    EnsembleError, TypeError when a or b cannot be read, ValueError when a step of `at` is not in both.
     """
     left, right = _side(a), _side(b)
     block = None
@@ -167,10 +173,10 @@ def difference(a: Any, b: Any, at: Sequence[int] | None = None, progress: Tick |
     was = _renamed(before, after)
     names = [name for name in dict.fromkeys([*after, *before]) if name not in was.values()]
     series = [_stated(name, before.get(name), after.get(name), was.get(name, "")) for name in names]
-    paired: list[Paired] = []
-    if block is not None:
-        series, paired = _seen(series, left, right, block, steps, progress)
-    return Difference(left, right, meaning, tuple(series), block, tuple(paired))
+    if block is None:
+        return Difference(left, right, meaning, tuple(series), None)
+    series, paired, damages = _seen(series, left, right, block, steps, progress)
+    return Difference(left, right, meaning, tuple(series), block, tuple(paired), damages)
 
 
 def _ranges(a: Side, b: Side) -> tuple[Change, ...]:
@@ -204,14 +210,42 @@ def _stated(name: str, before: Recipe | None, after: Recipe | None, was: str = "
 
 def _seen(
     stated: Sequence[SeriesDifference], a: Side, b: Side, block: Block, steps: list[int], progress: Tick | None
-) -> tuple[list[SeriesDifference], list[Paired]]:
-    """What became of the series by their values, and the paired figures of those that differ."""
-    both = [one.name for one in stated if one.state in ("equal", "differs")]
-    names = [name for name in both if not _same_digest(name, a, b)]
-    sums = {one.name: Sums(len(steps)) for one in stated if one.name in names and one.shares}
+) -> tuple[list[SeriesDifference], list[Paired], tuple[str, ...]]:
+    """What became of the series by their values, the paired figures of those that differ, and what is damaged."""
+    both = {one.name: one for one in stated if one.state in ("equal", "differs")}
+    sums = {one.name: Sums(len(steps)) for one in both.values() if one.shares}
+    sides = {"a": a.ensemble, "b": b.ensemble}
     found: dict[str, First] = {}
-    done = 0
+    try:
+        _compare(found, sums, a, b, block, steps, [*both, *_revealed(a, b)], progress)
+    except EnsembleError:
+        damages = broken(sides, {}, progress)
+        if not damages:
+            raise
+        return [replace(one, state="unread") if one.name in both else one for one in stated], [], damages
+    strange = {
+        name: first
+        for name, first in found.items()
+        if _same_digest(name, a, b) or (name in both and not both[name].moved)
+    }
+    series = [_as_seen(one, found) if one.name in both else one for one in stated]
+    paired = [row for name, each in sums.items() if name in found for row in each.figures(name, steps)]
+    return series, paired, broken(sides, strange, progress) if strange else ()
+
+
+def _compare(
+    found: dict[str, First],
+    sums: Mapping[str, Sums],
+    a: Side,
+    b: Side,
+    block: Block,
+    steps: Sequence[int],
+    names: Sequence[str],
+    progress: Tick | None,
+) -> None:
+    """Read the columns of both; note the first differences in `found`, gather `sums`."""
     assert a.ensemble is not None and b.ensemble is not None
+    done = 0
     for here, values in side_by_side(a.ensemble, b.ensemble, block, names) if names else ():
         note(found, here, values)
         columns = [i for i, step in enumerate(steps) if here.first_step <= step < here.end_step]
@@ -219,9 +253,12 @@ def _seen(
         done += here.rows
         if progress is not None:
             progress(done, block.rows)
-    series = [_as_seen(one, found) if one.name in both else one for one in stated]
-    paired = [row for name, each in sums.items() if name in found for row in each.figures(name, steps)]
-    return series, paired
+
+
+def _revealed(a: Side, b: Side) -> list[str]:
+    """Revealed columns of both whose recorded digests are the same, so that a difference is a damage."""
+    columns = [] if a.ensemble is None else a.ensemble.columns
+    return [column.name for column in columns if column.revealed and _same_digest(column.name, a, b)]
 
 
 def _gather(sums: Mapping[str, Sums], values: Mapping[str, Any], here: list[int], columns: list[int]) -> None:
@@ -239,7 +276,7 @@ def _same_digest(name: str, a: Side, b: Side) -> bool:
     manifests: list[Any] = [getattr(side.ensemble, "manifest", None) for side in (a, b)]
     if a.whole != b.whole or None in manifests:
         return False
-    left, right = (manifest.stored.get(name) for manifest in manifests)
+    left, right = ({**manifest.stored, **manifest.revealed}.get(name) for manifest in manifests)
     return left is not None and left == right
 
 

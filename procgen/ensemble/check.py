@@ -39,7 +39,7 @@ class Damage:
     area: Block | None = None
 
     def __str__(self) -> str:
-        return f"{self.file}: {self.sentence}"
+        return self.sentence if self.file in self.sentence else f"{self.file}: {self.sentence}"
 
 
 @dataclass(frozen=True)

@@ -13,7 +13,8 @@ if TYPE_CHECKING:
     from procgen.checks.difference import Difference, SeriesDifference, Side
 
 MOST = 20  # names in one line
-STATES = ("renamed", "new", "gone", "differs")
+STATES = ("renamed", "new", "gone", "differs", "unread")
+WORDS = {"differs": "differing", "unread": "not compared"}
 LINES = 60  # of a list; all is in --json
 
 
@@ -24,6 +25,9 @@ def difference_text(difference: Difference) -> str:
     if not difference.meaning:
         lines[-1] = "Both mean the same."
     lines += ["", _headline(difference), *_some([*_series(difference)])]
+    if difference.damages:
+        mend = "to mend: render again with --resume, which draws missing and damaged parts anew"
+        lines += ["", *_some([*difference.damages]), mend]
     if difference.paired:
         lines += ["", *_paired(difference), "", *wrap(CAUTION, 100)]
     alone = [one.name for one in difference.series if one.state == "differs" and not one.shares]
@@ -50,10 +54,13 @@ def _side(side: Side) -> str:
 def _headline(difference: Difference) -> str:
     counts = {state: sum(1 for one in difference.series if one.state == state) for state in STATES}
     equal = sum(1 for one in difference.series if one.state == "equal")
-    said = [f"{count} {'differing' if state == 'differs' else state}" for state, count in counts.items() if count]
-    said.append(f"all {'others ' if said else ''}equal" if equal and not counts["differs"] else f"{equal} equal")
+    said = [f"{count} {WORDS.get(state, state)}" for state, count in counts.items() if count]
+    apart = counts["differs"] or counts["unread"]
+    said.append(f"all {'others ' if said else ''}equal" if equal and not apart else f"{equal} equal")
     block = difference.compared
-    if block is not None:
+    if counts["unread"]:
+        how = "values could not be read, for damage"
+    elif block is not None:
         both = ", those in both," if _apart(difference) else ""
         how = f"values compared on paths {block.first_path}–{block.end_path - 1}{both}"
         how = f"{how}{'' if both else ','} steps 0–{block.end_step - 1}"
@@ -86,7 +93,12 @@ def _why(one: SeriesDifference, difference: Difference) -> str:
     terms = ", ".join(one.moved[:MOST]) + (", …" if len(one.moved) > MOST else "")
     if one.first is None:
         return f"would change, by {terms}"
-    because = f"by {terms}" if one.moved else "no term of it differs: the values were changed, or made by other code"
+    if one.moved:
+        because = f"by {terms}"
+    elif difference.damages:
+        because = "no term of it differs: values were changed, see below"
+    else:
+        because = "no term of it differs: the values were changed, or made by other code"
     return f"first at {one.first}; {because}"
 
 
