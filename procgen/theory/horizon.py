@@ -85,11 +85,9 @@ def variance_given_values(x: Expression, horizons: np.ndarray) -> np.ndarray:
     return variance * np.cumsum(_series(ratio).upto(last) ** 2)[horizons - 1]
 
 
-def variance_given_record(x: Expression, horizons: np.ndarray, given: str) -> np.ndarray:
+def variance_given_record(x: Expression, horizons: np.ndarray) -> np.ndarray:
     """Variance of the forecast error at horizons >= 1 after the record that a series leaves from: at steps h - 1."""
     _last(horizons)
-    if given == "parts":
-        raise Unknown("the series leaves from a recorded past, and that is what is given: ask with the values given")
     return np.maximum(x.covariance(x, horizons - 1, horizons - 1), 0.0)
 
 
