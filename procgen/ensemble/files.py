@@ -52,7 +52,7 @@ def writing(
         yield gathered
         for file, held in layout.files(name, columns).items():
             with folder.writing(file) as temporary:
-                with PartWriter(temporary, form(layout, held, stamps, part), said) as writer:
+                with PartWriter(temporary, form(layout, held, stamps, part, columns), said) as writer:
                     for group, unit in writer.form.pages(8 * len(columns)):
                         writer.page(group, unit, part, gathered.values)
                     writer.nodes = _of(gathered.nodes, held)

@@ -16,6 +16,7 @@ from procgen.ensemble.columns import Column
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.layouts import Layout, labels, owned
 from procgen.ensemble.plan import BUFFER_BYTES, GROUP_ROWS, Block, cut
+from procgen.ensemble.reading import expect, numbers, values_of
 
 if TYPE_CHECKING:
     import pyarrow as pa
@@ -23,16 +24,21 @@ if TYPE_CHECKING:
 Unit = Sequence[Column]
 
 
-def form(layout: Layout, columns: Unit, stamps: Any, whole: Block) -> Form:
-    """The form of a file that holds `columns` of the rectangle `whole`; `stamps` is None without a start."""
-    return {"long": Long, "panel": Panel, "nested": Nested, "wide": Wide}[layout.kind](layout, columns, stamps, whole)
+def form(layout: Layout, columns: Unit, stamps: Any, whole: Block, among: Unit | None = None) -> Form:
+    """The form of a file that holds `columns` of the rectangle `whole`; `stamps` is None without a start.
+
+    `among` are the columns of all files that will be read as one table: those of the file itself when None.
+    """
+    kind = {"long": Long, "panel": Panel, "nested": Nested, "wide": Wide}[layout.kind]
+    return kind(layout, columns, stamps, whole, columns if among is None else among)
 
 
 class Form:
     """Rows by path, then step; one column a series. This is layout long, and what the others share."""
 
-    def __init__(self, layout: Layout, columns: Unit, stamps: Any, whole: Block):
+    def __init__(self, layout: Layout, columns: Unit, stamps: Any, whole: Block, among: Unit):
         self.layout, self.columns, self.stamps, self.whole = layout, tuple(columns), stamps, whole
+        self.among = among
         self.names = layout.index(stamps is not None)
         self.units: list[Unit] = [self.columns]
         self.schema = self._schema()
@@ -129,16 +135,16 @@ class Form:
 
     def values(self, table: pa.Table, block: Block, unit: Unit, where: object) -> dict[str, np.ndarray]:
         """Stored values (paths, steps) by name; EnsembleError where a row is not what belongs there."""
-        shape = block.paths, block.steps
         self._expect_index(table, block, where)
-        return {c.name: exactly(flat(table, c.name, where, c.gaps), c, where).reshape(shape) for c in unit}
+        return {c.name: values_of(table.column(c.name), c, where, block) for c in unit}
 
     def _expect_index(self, table: pa.Table, block: Block, where: object) -> None:
         for role, name in self.names.items():
             if role != "id":
                 paths = np.arange(block.first_path, block.end_path)[:, None]
                 wanted = paths if role == "path" else self._at(role, block)
-                expect(where, name, flat(table, name, where).reshape(block.paths, block.steps), wanted, block)
+                found = numbers(table.column(name), f"column {name}", where, block)
+                expect(where, name, found.reshape(block.paths, block.steps), wanted, block)
 
 
 class Long(Form):
@@ -148,16 +154,16 @@ class Long(Form):
 class Panel(Form):
     """Rows by id, path, then step; ids are names of series, and what is revealed of them stands beside the value."""
 
-    def __init__(self, layout: Layout, columns: Unit, stamps: Any, whole: Block):
+    def __init__(self, layout: Layout, columns: Unit, stamps: Any, whole: Block, among: Unit):
         self.value = layout.name("value")
-        super().__init__(layout, columns, stamps, whole)
+        super().__init__(layout, columns, stamps, whole, among)
         self.units = [*owned(columns)]
 
     def _schema(self) -> pa.Schema:
         import pyarrow as pa
 
         units = owned(self.columns)
-        types = {some[0].type for some in units}
+        types = {some[0].type for some in owned(self.among)}
         kind = arrow_type(types.pop() if len(types) == 1 else "float64")
         value = pa.field(self.value, kind, nullable=any(some[0].gaps for some in units))
         beside = [labels(some) for some in units]
@@ -194,15 +200,13 @@ class Panel(Form):
         for name in self.schema.names[len(self.names) :]:
             if name not in places and table.column(name).null_count < table.num_rows:
                 raise EnsembleError(f"{where} is damaged: column {name} has values where {unit[0].name} has none")
-        shape = block.paths, block.steps
-        return {
-            c.name: exactly(flat(table, name, where, c.gaps), c, where).reshape(shape) for name, c in places.items()
-        }
+        return {c.name: values_of(table.column(name), c, where, block) for name, c in places.items()}
 
     def _expect_id(self, table: pa.Table, name: str, block: Block, where: object) -> None:
+        import pyarrow as pa
         import pyarrow.compute as pc
 
-        column = table.column(self.names["id"])
+        column = table.column(self.names["id"]).cast(pa.string())
         if not pc.all(pc.fill_null(pc.equal(column, name), False)).as_py():
             others = [other for other in pc.unique(column).to_pylist() if other != name]
             raise EnsembleError(
@@ -248,16 +252,18 @@ class Nested(Form):
     def values(self, table: pa.Table, block: Block, unit: Unit, where: object) -> dict[str, np.ndarray]:
         first = Block(block.first_path, block.paths, block.first_step, 1)
         for role, name in self.names.items():
-            expect(where, name, flat(table, name, where)[:, None], self._of_rows(role, block)[:, None], first)
-        return {c.name: exactly(self._list(table, c, block, where), c, where) for c in unit}
+            found = numbers(table.column(name), f"column {name}", where, first)
+            expect(where, name, found[:, None], self._of_rows(role, block)[:, None], first)
+        return {c.name: self._list(table, c, block, where) for c in unit}
 
     def _list(self, table: pa.Table, column: Column, block: Block, where: object) -> np.ndarray:
         import pyarrow.compute as pc
 
         lists = table.column(column.name)
-        sizes = numbers(pc.list_value_length(lists), column.name, where)
+        first = Block(block.first_path, block.paths, block.first_step, 1)
+        sizes = numbers(pc.list_value_length(lists), f"column {column.name}", where, first)
         expect(where, f"{column.name} (its length)", sizes[:, None], np.full((block.paths, 1), block.steps), block)
-        return numbers(pc.list_flatten(lists), column.name, where, column.gaps).reshape(block.paths, block.steps)
+        return values_of(pc.list_flatten(lists), column, where, block)
 
 
 class Wide(Form):
@@ -298,9 +304,13 @@ class Wide(Form):
     def values(self, table: pa.Table, block: Block, unit: Unit, where: object) -> dict[str, np.ndarray]:
         for role, name in self.names.items():
             first = Block(block.first_path, 1, block.first_step, block.steps)
-            expect(where, name, flat(table, name, where)[None], self._at(role, block)[None], first)
-        columns = [exactly(flat(table, name, where, unit[0].gaps), unit[0], where) for name in self._paths(block)]
-        return {unit[0].name: np.stack(columns)}
+            found = numbers(table.column(name), f"column {name}", where, first)
+            expect(where, name, found[None], self._at(role, block)[None], first)
+        rows = []
+        for path, name in enumerate(self._paths(block), block.first_path):
+            here = Block(path, 1, block.first_step, block.steps)
+            rows.append(values_of(table.column(name), unit[0], where, here))
+        return {unit[0].name: np.concatenate(rows)}
 
 
 def _ranges(whole: Block, row_bytes: int) -> Iterator[Block]:
@@ -331,48 +341,3 @@ def array(values: np.ndarray, kind: pa.DataType, gaps: bool = False) -> pa.Array
         flat_values = np.ascontiguousarray(values).reshape(-1)
         return pa.array(flat_values, kind, mask=np.isnan(flat_values))
     return pa.Array.from_buffers(kind, values.size, [None, pa.py_buffer(np.ascontiguousarray(values).reshape(-1))])
-
-
-def flat(table: pa.Table, name: str, where: object, gaps: bool = False) -> np.ndarray:
-    """The numbers of a column; times as microseconds."""
-    return numbers(table.column(name), name, where, gaps)
-
-
-def numbers(column: pa.ChunkedArray, name: str, where: object, gaps: bool = False) -> np.ndarray:
-    """The numbers of an Arrow column, NaN for null where it may have `gaps`; times as microseconds."""
-    import pyarrow as pa
-
-    if gaps:
-        import pyarrow.compute as pc
-
-        found = numbers(pc.fill_null(column, np.nan), name, where)
-        return np.where(np.isnan(found), found.dtype.type(np.nan), found)  # one NaN, whatever bits a file has
-    if column.null_count:
-        raise EnsembleError(f"{where} is damaged: column {name} has missing values")
-    if column.num_chunks == 1:  # its memory as it is; `to_numpy` would import pandas for it
-        chunk = column.chunk(0)
-        kind = "<i8" if pa.types.is_timestamp(column.type) else np.dtype(column.type.to_pandas_dtype())
-        return np.frombuffer(chunk.buffers()[1], kind, len(chunk), chunk.offset * np.dtype(kind).itemsize)
-    return column.cast(pa.int64()).to_numpy() if pa.types.is_timestamp(column.type) else column.to_numpy()
-
-
-def exactly(values: np.ndarray, column: Column, where: object) -> np.ndarray:
-    """Values in the type of their column, where a panel keeps columns of several types in one."""
-    if values.dtype == column.type:
-        return values
-    with np.errstate(all="ignore"):
-        kept = values.astype(column.type)
-    if not np.array_equal(kept.astype(values.dtype), values, equal_nan=column.gaps):
-        raise EnsembleError(f"{where} is damaged: a value of {column.name} is not of type {column.type}")
-    return kept
-
-
-def expect(where: object, name: str, got: np.ndarray, wanted: np.ndarray, block: Block) -> None:
-    """EnsembleError naming the first row of a rectangle that is not the one that belongs there."""
-    if np.array_equal(got, np.broadcast_to(wanted, got.shape)):
-        return
-    i, j = np.argwhere(got != wanted)[0]
-    raise EnsembleError(
-        f"{where} is damaged: where path {block.first_path + i}, step {block.first_step + j} belongs, "
-        f"column {name} has {got[i, j]}"
-    )

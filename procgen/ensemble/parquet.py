@@ -21,6 +21,7 @@ from procgen.ensemble.forms import Form, Unit, form
 from procgen.ensemble.layouts import Layout
 from procgen.ensemble.places import Place, readable
 from procgen.ensemble.plan import GROUP_ROWS, Block, cut
+from procgen.ensemble.reading import fits
 
 if TYPE_CHECKING:
     import pyarrow as pa
@@ -128,7 +129,9 @@ def read(
         return
     held = {folder / file: some for file, some in layout.files(name, columns).items()}
     files = {
-        path: form(layout, some, stamps, part) for path, some in held.items() if any(c.name in names for c in some)
+        path: form(layout, some, stamps, part, columns)
+        for path, some in held.items()
+        if any(c.name in names for c in some)
     }
     for piece in next(iter(files.values())).pieces(8 * len(columns)) if files else ():
         if piece.end_path > first_path and piece.first_path < end:
@@ -196,20 +199,16 @@ def _opened(path: Place, rows: Form) -> Iterator[pq.ParquetFile]:
 
 
 def _expect_schema(path: Place, found: pa.Schema, expected: pa.Schema) -> None:
-    types: dict[str, list[str]] = {}
+    types: dict[str, list[pa.DataType]] = {}
     for name, kind in zip(found.names, found.types, strict=True):
-        types.setdefault(name, []).append(str(kind))
+        types.setdefault(name, []).append(kind)
     for field in expected:
-        if [_plain(kind) for kind in types.get(field.name, [])] != [_plain(str(field.type))]:
+        here = types.get(field.name, [])
+        if len(here) != 1 or not fits(here[0], field.type):
             raise EnsembleError(
                 f"{path} is damaged: expected one column {field.name} of type {field.type}, "
-                f"got {' and '.join(types.get(field.name, [])) or 'none'}"
+                f"got {' and '.join(map(str, here)) or 'none'}"
             )
-
-
-def _plain(kind: str) -> str:
-    """A type as text, without what a list calls its elements."""
-    return kind.replace("list<element:", "list<item:").replace(" not null", "")
 
 
 def pieces(here: range, part: Block) -> Iterator[Block]:

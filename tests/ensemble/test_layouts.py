@@ -128,8 +128,15 @@ def test_a_panel_has_a_row_an_observation_and_is_whole_numbers_where_all_are(tmp
     assert len(visible(tmp_path / "each")) == 4
     guests = frame(tmp_path / "each", "guests.paths-*.parquet")
     assert list(guests) == ["item", "path", "time", "sold"] and set(guests["item"]) == {"guests"}
-    assert guests["sold"].dtype == np.int64
     assert np.array_equal(guests["sold"].to_numpy().reshape(30, 20), demand["guests"])
+    files = [*(tmp_path / "each").glob("*.parquet")]
+    assert {str(pq.read_schema(file).field("sold").type) for file in files} == {"double"}  # of all: one table
+    together = pd.read_parquet(files)
+    assert len(together) == 3 * 30 * 20 and together["sold"].sum() == pytest.approx(found["value"].sum())
+    counts = {**DEMAND, "series": {name: DEMAND["series"]["guests"] for name in ("guests", "cups")}}
+    for partition in ("paths", "series"):
+        pg.render(counts, tmp_path / partition, layout="panel", partition=partition)
+        assert frame(tmp_path / partition)["value"].dtype == np.int64
 
 
 def test_a_panel_has_the_step_where_there_is_no_time(tmp_path):
@@ -395,6 +402,69 @@ def test_other_row_groups_with_the_same_values_agree(tmp_path):
             table = table.replace_schema_metadata(table.schema.metadata | {parquet.NODES: nodes})
             pq.write_table(table, file, row_group_size=7 if len(table) < 2000 else 1234)
         assert fake_check(made.path, redraw=True).ok
+
+
+def _as(kind):
+    """A table whose columns have other types that hold the same."""
+
+    def cast(table):
+        fields = []
+        for field in table.schema:
+            other = kind(field.type)
+            fields.append(pa.field(field.name, other or field.type))
+        return table.cast(pa.schema(fields))
+
+    return cast
+
+
+def _text_and_narrow(kind):
+    if pa.types.is_string(kind):
+        return pa.large_string()
+    if pa.types.is_list(kind):
+        return pa.large_list(pa.float64())
+    if pa.types.is_timestamp(kind):
+        return pa.timestamp("ns", kind.tz)
+    return pa.int32() if pa.types.is_integer(kind) else None
+
+
+def _double(kind):
+    if pa.types.is_string(kind):
+        return pa.dictionary(pa.int32(), pa.string())
+    return pa.float64() if pa.types.is_integer(kind) else None
+
+
+OTHERS = [_as(_text_and_narrow), _as(_double), lambda table: pa.Table.from_pandas(table.to_pandas())]
+
+
+@ways
+@pytest.mark.parametrize("other", OTHERS, ids=["narrow", "double", "pandas"])
+def test_a_type_that_holds_the_same_values_is_as_good(tmp_path, layout, partition, other):
+    usual = pg.render(DEMAND)
+    made = pg.render(DEMAND, tmp_path, layout=layout, partition=partition)
+    for file in tmp_path.glob("*.parquet"):
+        pq.write_table(other(pq.read_table(file)), file)  # without our footers
+    assert pg.check_digest(tmp_path, redraw=True).ok
+    assert all(np.array_equal(made[name], usual[name]) for name in usual.names)
+
+
+@ways
+def test_a_value_of_another_kind_is_told_with_its_place(tmp_path, layout, partition):
+    pg.render(DEMAND, tmp_path, layout=layout, partition=partition)
+    file = next(tmp_path.glob("guests*.parquet" if partition == "series" else "*.parquet"))
+    frame = pq.read_table(file).to_pandas()
+    for value, told in ((0.5, "path 3, step 7: 0.5 is not of type int64"), (None, "has no value at path 3, step 7")):
+        if layout == "nested":
+            values = [*map(list, frame["guests"])]
+            values[3][7] = value
+            frame["guests"] = values
+        else:
+            column = {"panel": "value", "wide": "path_3"}.get(layout, "guests")
+            rows = frame.index[frame["id"] == "guests"] if layout == "panel" else frame.index
+            frame[column] = frame[column].astype(float)
+            frame.loc[rows[7 if layout == "wide" else 3 * 20 + 7], column] = value
+        pq.write_table(pa.Table.from_pandas(frame), file)
+        text = pg.check_digest(tmp_path).text()
+        assert f"series guests{',' if value else ''} {told}" in text and text.count(file.name) == 1
 
 
 def test_a_value_where_none_belongs_is_found(tmp_path):

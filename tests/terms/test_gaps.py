@@ -81,10 +81,11 @@ def test_files_have_nulls_where_values_are_missing_and_only_there(tmp_path, layo
 def test_one_nan_in_digests_whatever_its_bits():
     import pyarrow as pa
 
-    from procgen.ensemble.forms import numbers
+    from procgen.ensemble.plan import Block
+    from procgen.ensemble.reading import numbers
 
     odd = np.array([1.0, np.nan]).view(np.uint64) ^ np.array([0, 1], np.uint64)  # another NaN
-    found = numbers(pa.chunked_array([pa.array(odd.view(np.float64))]), "x", "here", True)
+    found = numbers(pa.chunked_array([pa.array(odd.view(np.float64))]), "x", "here", Block(0, 1, 0, 2), True)
     assert found.view(np.uint64)[1] == np.array(np.nan).view(np.uint64)
 
 
