@@ -288,7 +288,9 @@ def _steps(
     if grid.at:  # no other times are known
         if back:
             why = "where the times of steps are listed (time.at), those before step 0 are not among them"
-            reader.fault(tree.value["time"], f"{why}; match by step, as in {{…, step: COLUMN}}, up to step −1")
+            how = "match by step, as in {…, step: COLUMN}, up to step −1, or, where steps differ in length for "
+            how += "the term (ornstein_uhlenbeck), give it its own before: {x: 16}, its value at step −1"
+            reader.fault(tree.value["time"], f"{why}; {how}")
             return None
         span = np.arange(len(grid.at))
     stamps, clocks = grid.stamps(int(span[0]), len(span)).tolist(), grid.local(span + (grid.stamp == "end")).tolist()

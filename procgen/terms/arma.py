@@ -260,7 +260,8 @@ def not_causal(phi, instead):
     """What to say of an autoregression without a causal stationary solution."""
     return (
         f"expected all roots of 1 − φ₁z − … outside the unit circle, got one at {_root(phi)}; shrink phi, "
-        f"or {instead}, or give `before` to run it on purpose"
+        f"or {instead}, or give the term its own `before: {{x: …}}` (one at the series does not do) to run it "
+        "on purpose"
     )
 
 

@@ -33,7 +33,7 @@ def single(entry: Entry, node: Node, x: Array) -> Told | Unknown:
         return alone, why
     recursion = recursion_of(node.term)
     if recursion is None:
-        return Unknown(f"{node.term.kind} cannot be told where it stands; remove before at the series")
+        return Unknown(f"{node.term.kind} cannot be told where it stands; remove before at the series{_own(node.term)}")
     needs = len(recursion.phi) + len(recursion.delta)
     if len(x) < needs:
         return Unknown(f"expected at least {needs} values before step 0 (one a lag), got {len(x)}; add earlier ones")
@@ -49,6 +49,14 @@ def single(entry: Entry, node: Node, x: Array) -> Told | Unknown:
     elif not isinstance(noise, WhiteNoise):
         said = (f"the variance of {node.name}: the record is too short to tell a shock",)
     return left, said
+
+
+def _own(term: Any) -> str:
+    """How a term is told by itself what a record cannot tell it; nothing where it has no `before`."""
+    if not any(p.name == "before" for p in term.parameters):
+        return ""
+    why = "" if getattr(term, "even", True) else ", whose steps differ in length here,"
+    return f" and give {term.kind}{why} its own, as in before: {{x: 16}} with its value at step −1"
 
 
 def _shocks(recursion: Recursion, x: Array) -> Array | Unknown:

@@ -101,7 +101,8 @@ class VectorArma(Term):
             yield (
                 "phi",
                 f"expected all eigenvalues of the recursion inside the unit circle, got one of size {radius:.6g}; "
-                "shrink phi, use vector_error_correction for unit roots, or give `before` to run it on purpose",
+                "shrink phi, use vector_error_correction for unit roots, or give the term its own "
+                "`before: {x: [[…], …]}` to run it on purpose",
             )
         for name, past, part in (("x", "values", "phi"), ("shocks", "shocks", "theta")):
             if before is None:

@@ -192,8 +192,8 @@ class SeriesTheory:
 
         `given` is what is known of the past: the series' own "values", or the shocks of all its "parts", which tell
         more where there are several and the series is linear in them. Where conditional variances move it is their
-        mean. A series that leaves from a recorded past (`recorded`) is forecast from there, whatever `given`: the error
-        h steps ahead has its variance at step h - 1. Source: Box & Jenkins (1970), ch. 5; Harvey (1989), ch. 3; Kolmogorov (1941).
+        mean. A series that leaves from a recorded past (`recorded`) is forecast from there, whatever `given`: it is
+        the variance at step h - 1. Source: Box & Jenkins (1970), ch. 5; Harvey (1989), ch. 3; Kolmogorov (1941).
         """
         if given not in ("values", "parts"):
             raise ValueError(f"expected `given` to be values or parts, got {given!r}")

@@ -74,8 +74,9 @@ def test_raw_and_digest():
 @pytest.mark.parametrize("entry, message", [
     ({"ar": {"phi": by_path({"uniform": [0.3, 1.2]}), "sd": 1}},
      "expected all roots of 1 − φ₁z − … outside the unit circle, got one at 0.8333 (modulus 0.8333); shrink phi, or "
-     "put the term without that root inside `integrate`, or give `before` to run it on purpose; this is at "
-     "ar.phi = 1.2, which the draws reach; keep them below 1\n  at series.x[0].ar.phi"),
+     "put the term without that root inside `integrate`, or give the term its own `before: {x: …}` (one at the series "
+     "does not do) to run it on purpose; this is at ar.phi = 1.2, which the draws reach; keep them below 1\n"
+     "  at series.x[0].ar.phi"),
     ({"garch": {"omega": 1, "alpha": by_path({"uniform": [0.1, 0.3]}), "beta": by_path({"uniform": [0.5, 0.7]}),
                 "law": {"student_t": {"df": 5}}}},
      "alpha + beta must be below 1 for a finite variance, got 1; lower one, or say `allow_infinite_variance: true` to "
