@@ -104,6 +104,8 @@ def _series(theory: SeriesTheory, facts: dict[str, Any], unit: str | None, lags:
 def _past(past: dict[str, Any]) -> Iterable[str]:
     values, last = _many(past["values"], "value"), number(past["last"])
     yield f"leaves from its recorded past of {values}, the last {last} at step −1; all that follows is given that past"
+    for what in past.get("replaced", ()):
+        yield f"the {what} is not used: the record says where it stands"
     for what in past["unconditioned"]:
         yield f"what came before could not be conditioned: {what}"
 

@@ -28,11 +28,12 @@ _kept: OrderedDict[int, tuple[Series, Series, Left]] = OrderedDict()
 
 @dataclass(frozen=True)
 class Left:
-    """What a series leaves from: how many values, the last of them, and what could not be conditioned."""
+    """What a series leaves from: how many values, the last, what could not be conditioned, what is not used."""
 
     count: int
     last: float
     unconditioned: tuple[str, ...] = ()
+    replaced: tuple[str, ...] = ()
 
 
 def leaving(spec: Spec) -> tuple[Spec, Mapping[str, Left]]:
@@ -103,8 +104,15 @@ class _Departure:
             new, extra = self._filtered([part for part in parts if part is not None], rest)
         by_id = {id(e): changed for (e, _), changed in zip(self.random, new, strict=True)}
         body = tuple([by_id.get(id(e), e) for e in self.one.of])
-        left = Left(len(self.past), float(self.past[-1]), said)
+        left = Left(len(self.past), float(self.past[-1]), said, tuple(self._replaced(new)))
         return replace(self.one, of=(*body, *extra), before=None), left
+
+    def _replaced(self, new: Sequence[Entry]) -> Iterator[str]:
+        """The numbers that stand in the spec for where a term begins, and give way to the record."""
+        for (entry, node), changed in zip(self.random, new, strict=True):
+            for p in node.term.parameters:
+                if p.name in ("start", "slope") and changed is not entry and entry.values[p.name] != p.default:
+                    yield f"{p.name} of {node.name}"
 
     def _moves(self, node: Node) -> bool:
         from procgen.terms.graph import Source

@@ -129,7 +129,8 @@ class Theory(Mapping[str, SeriesTheory]):
         left = None if self.graph is None else self.graph.left.get(name)
         if left is None:
             return {}
-        return {"past": {"values": left.count, "last": left.last, "unconditioned": list(left.unconditioned)}}
+        past = {"values": left.count, "last": left.last, "unconditioned": list(left.unconditioned)}
+        return {"past": past | ({"replaced": list(left.replaced)} if left.replaced else {})}
 
     def _go_together(self, a: str, b: str) -> bool:
         """Whether something random is behind both series, or correlated."""

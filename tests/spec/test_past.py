@@ -190,6 +190,10 @@ PAST = [3.0, 1.0, 4.0, 1.0, 5.0, 9.0, 2.0, 6.0]
             [{"stochastic_volatility": {"sd": 1, "phi": 0.9, "eta": 0.2}}],
             r"x.stochastic_volatility cannot leave .* nothing of it is told by its values .* remove before",
         ),
+        (
+            [{"ar": {"phi": 1.05, "sd": 3}}],
+            r"shrink phi, .* or give the term its own `before: \{x: …\}` \(one at the series does not do\)",
+        ),
         ([{"poisson": {"mean": 3}}], r"x.poisson cannot leave from the past of x: poisson cannot be told"),
         (
             [AR, {"random_walk": {"sd": 1, "law": "laplace"}}],
@@ -216,6 +220,35 @@ PAST = [3.0, 1.0, 4.0, 1.0, 5.0, 9.0, 2.0, 6.0]
 def test_terms_that_cannot_be_conditioned(tmp_path, of, message):
     (said,) = faults(spec_file(tmp_path, PAST, of=of, shared={"both": [AR]}))
     assert re.search(message, said), said
+
+
+def test_steps_of_their_own_lengths_send_to_the_before_of_the_term(tmp_path):
+    days("2027-03-01", 9).to_csv(tmp_path / "h.csv", index=False)
+    time = {"at": ["2027-03-10", "2027-03-11", "2027-03-14"]}
+    body = {"ornstein_uhlenbeck": {"rate": 0.3, "sd": 2}}
+    for before in ({**FILE, "time": "day"}, [16]):
+        (said,) = faults(spec_file(tmp_path, before, time, of=[body]))
+        assert "ornstein_uhlenbeck" in said and "its own" in said and "before: {x: 16}" in said
+    own = {"ornstein_uhlenbeck": {**body["ornstein_uhlenbeck"], "before": {"x": 16}}}
+    assert pg.theory({**HEAD, "time": time, "series": {"x": [own]}})["x"].variance(0) > 0
+
+
+def test_what_a_record_replaces_is_said(tmp_path):
+    from procgen.report.theory import theory_text
+
+    for kind, numbers, what in (
+        ("random_walk", {"sd": 1, "start": 7}, ["start of x.random_walk"]),
+        ("random_walk", {"sd": 1}, []),
+        (
+            "local_linear_trend",
+            {"level_sd": 1, "slope_sd": 1, "noise_sd": 1, "start": 7, "slope": 2},
+            ["start of x.local_linear_trend", "slope of x.local_linear_trend"],
+        ),
+    ):
+        assert told(tmp_path, [{kind: numbers}]).get("replaced", []) == what
+        spec = pg.load(tmp_path / "s.yaml")
+        text = " ".join(theory_text(spec, pg.theory(spec), [0], 1).split())
+        assert all(f"the {one} is not used: the record says where it stands" in text for one in what)
 
 
 def test_a_group_has_no_past(tmp_path):
