@@ -84,7 +84,8 @@ def export(
 ) -> None:
     """Write the ensemble OUT, or some of it, as one file for another tool.
 
-    What the file cannot hold is said before it is written; the file appears when it is whole.
+    What the file cannot hold is said before it is written; the file appears when it is whole. Values are not checked
+    on the way: `procgen digest OUT` tells whether they are those that were drawn.
     """
     import procgen as pg
     from procgen.ensemble.export import export as planned

@@ -15,6 +15,7 @@ from collections.abc import Iterator
 from pathlib import Path
 
 import numpy as np
+import pandas as pd
 import pytest
 from typer.testing import CliRunner
 
@@ -80,6 +81,39 @@ def test_the_python_of_the_readme_runs(tmp_path, monkeypatch):
     # AR(1): σ²/(1 − φ²) (Box & Jenkins 1970, ch. 3).
     assert names["variance"] == pytest.approx([9 / (1 - 0.64)] * 2)
     assert names["verdict"].agrees is True
+
+
+RECIPE = re.compile(r"^\| (`(?:long|panel|nested|wide)`.*?) \| .*?`(pd\..+?)`", re.M)
+
+
+def test_files_are_read_with_pandas_as_the_readme_says(tmp_path, monkeypatch):
+    page = (ROOT / "README.md").read_text(encoding="utf-8")
+    monkeypatch.setattr("procgen.ensemble.plan.PART_BYTES", 1 << 19)
+    spec = pg.load(ROOT / "specs" / "cold-store.yaml").changed(paths=1100, steps=30)
+    usual = pg.render(spec)
+    recipes = [
+        (layout, "by series" in which, code)
+        for which, code in RECIPE.findall(page)
+        for layout in re.findall("`(.+?)`", which)
+    ]
+    assert len(recipes) == 7
+    for number, (layout, by_series, code) in enumerate(recipes):
+        out = tmp_path / str(number)
+        pg.render(spec, out, layout=layout, partition="series" if by_series else None)
+        assert len([*out.glob("*load_kw*.parquet" if by_series or layout == "wide" else "*.parquet")]) > 1
+
+        def read(p, out=out):
+            return [pd.read_parquet(file) for file in sorted(out.glob(f"{p}.parquet"))]
+
+        found = eval(code, {"pd": pd, "read": read})
+        for name in ("load_kw",) if layout == "wide" else ("load_kw", "price"):
+            if layout == "panel":
+                values = found.loc[found["id"] == name, "value"].to_numpy().reshape(1100, 30)
+            elif layout == "wide":
+                values = found.to_numpy().T
+            else:
+                values = np.array([*found[name]]).reshape(1100, 30)
+            assert np.array_equal(values, usual[name]), f"{layout}: {code}"
 
 
 def test_the_term_of_the_developers_page_is_one(monkeypatch):

@@ -279,7 +279,9 @@ class OnDisk(Ensemble):
 
 
 def open_ensemble(path: str | Place) -> OnDisk:
-    """The ensemble in a folder that `render` has finished; reads only its manifest.
+    """The ensemble in a folder that `render` has finished; reads only its manifest, and checks no values.
+
+    Values are read as the files have them; `check_digest` tells whether they are those that were drawn.
 
     Raises EnsembleError when there is none, when it was changed, when it is unfinished, when parts are missing,
     or when it was drawn with another stream version.
