@@ -9,8 +9,9 @@ from __future__ import annotations
 from collections import Counter
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
-from datetime import UTC, datetime
+from datetime import UTC, datetime, timedelta
 from typing import Any
+from zoneinfo import ZoneInfo
 
 import numpy as np
 
@@ -298,20 +299,52 @@ def _steps(
     by_clock = dict(zip(clocks[::-1], span.tolist()[::-1], strict=True))  # of two that happen twice, the first
     steps: list[int | None] = []
     for i, value in enumerate(values):
-        moment = value if isinstance(value, datetime) else parse_date(str(value))
-        if moment is None:
+        if (moment := _moment(value)) is None:
             _refused("a date, or a date and time,", by, i, table, tree, reader)
             return None
-        known, at = (by_clock, moment.replace(tzinfo=UTC)) if moment.tzinfo is None else (by_utc, moment)
-        micro, ends = round(at.timestamp() * 1e6), clocks if known is by_clock else stamps
+        known, ends = (by_clock, clocks) if moment.tzinfo is None else (by_utc, stamps)
+        micro = _micro(moment)
         if micro not in known and micro <= ends[-1]:
-            none = f"no step is at {value}; take that row out ({table.rows[i]}), or change the spec's time"
             old = f"{value} ({table.rows[i]}) lies more than {-span[0]:,} steps before step 0; take out older rows"
             near = micro > ends[0] or grid.at
+            none = _between(value, table.rows[i], micro, known, grid.zone or "UTC")
+            none += "; take that row out, or change the spec's time" if steps else _all_off(values, by_clock, by_utc)
             reader.fault(tree.value["file"], none if near else f"{old}, or change the spec's start")
             return None
         steps.append(known.get(micro))
     return steps
+
+
+def _moment(value: Any) -> datetime | None:
+    return value if isinstance(value, datetime) else parse_date(str(value))
+
+
+def _micro(moment: datetime) -> int:
+    """µs since 1970: of UTC, or by the clock where there is no offset."""
+    return round((moment.replace(tzinfo=UTC) if moment.tzinfo is None else moment).timestamp() * 1e6)
+
+
+def _between(value: Any, row: str, micro: int, known: dict[int, int], zone: str) -> str:
+    """What is said of a time at which no step is."""
+    near = min(known, key=lambda at: abs(at - micro))
+    moment = datetime(1970, 1, 1, tzinfo=UTC) + timedelta(microseconds=near)
+    local = _moment(value).tzinfo is None  # type: ignore[union-attr]  # it has been read
+    text = moment.replace(tzinfo=None).isoformat() + (f" in {zone}" if local else "Z")
+    if not local and zone != "UTC":
+        text += f", which is {moment.astimezone(ZoneInfo(zone)).replace(tzinfo=None).isoformat()} in {zone}"
+    return f"no step is at {value} ({row}), the nearest, step {known[near]}, is at {text}"
+
+
+def _all_off(values: Sequence[Any], by_clock: dict[int, int], by_utc: dict[int, int]) -> str:
+    """How to mend a table whose first time is at no step: row by row, or as a whole where no other one is at one."""
+    moments = [moment for moment in map(_moment, values) if moment is not None]
+    on = sum(_micro(moment) in (by_clock if moment.tzinfo is None else by_utc) for moment in moments)
+    if on or len(moments) < 2:
+        return "; take that row out, or change the spec's time"
+    return (
+        f", and so it is with all {len(moments):,} rows: is the zone of the table another than that of the spec, or "
+        "its start or step? Convert the times, or change the spec's time (zone, start, every)"
+    )
 
 
 def _refused(expected: str, by: str, row: int, table: Columns, tree: Tree, reader: Reading) -> None:

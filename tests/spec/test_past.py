@@ -149,7 +149,10 @@ def without(table, *rows):
             days("2027-03-01", 9).assign(load="50,5"),
             r'got "50,5" in column load on line 2, .* 8 other rows have none either; write the decimal sign as a',
         ),
-        (days("2027-03-01", 9).replace("2027-03-05", "2027-03-05T11:00"), r"no step is at 2027-03-05T11:00; take that"),
+        (
+            days("2027-03-01", 9).replace("2027-03-05", "2027-03-05T11:00"),
+            r"no step is at 2027-03-05T11:00 \(line 6\), the nearest, step -5, is at 2027-03-05T00:00:00 in UTC; take",
+        ),
         (pd.concat([days("2027-03-01", 9)] * 2), r"the table has two rows for step -9; keep one"),
         (days("2027-03-01", 9).rename(columns={"load": "lode"}), r"the table has no column load; .* did you mean lode"),
         (days("2027-03-01", 9).replace("2027-03-05", "last friday"), r"expected a date, or a date and time, in column"),
@@ -249,6 +252,19 @@ def test_what_a_record_replaces_is_said(tmp_path):
         spec = pg.load(tmp_path / "s.yaml")
         text = " ".join(theory_text(spec, pg.theory(spec), [0], 1).split())
         assert all(f"the {one} is not used: the record says where it stands" in text for one in what)
+
+
+def test_a_record_by_another_clock_is_told_with_the_nearest_step(tmp_path):
+    at = pd.date_range("2027-03-01", periods=9, freq="D", tz="UTC")
+    table = pd.DataFrame({"day": at.astype(str), "load": 1.0})
+    table.to_csv(tmp_path / "h.csv", index=False)
+    (said,) = faults(spec_file(tmp_path, {**FILE, "time": "day"}, {**DAILY, "zone": "Europe/Berlin"}))
+    assert "no step is at 2027-03-01 00:00:00+00:00 (line 2), the nearest, step -9, is at 2027-02-28T23:00:00Z" in said
+    assert "which is 2027-03-01T00:00:00 in Europe/Berlin, and so it is with all 9 rows: is the zone of the" in said
+    table.loc[1:, "day"] = days("2027-03-02", 8)["day"]
+    table.to_csv(tmp_path / "h.csv", index=False)
+    (said,) = faults(spec_file(tmp_path, {**FILE, "time": "day"}, {**DAILY, "zone": "Europe/Berlin"}))
+    assert said.endswith("in Europe/Berlin; take that row out, or change the spec's time")
 
 
 def test_a_group_has_no_past(tmp_path):

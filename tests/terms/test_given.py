@@ -89,7 +89,7 @@ def test_more_steps_than_numbers_are_refused():
         ({"at": [*CLOCKS, CLOCKS[1]], "degrees": range(6)}, "the table has two rows for step 0; keep one"),
         ({"at": CLOCKS[2:], "degrees": range(3)}, "the table has nothing for step 0; check its first row"),
         ({"at": [*CLOCKS[:2], CLOCKS[3]], "degrees": range(3)}, "the table has nothing for step 1, and more after it"),
-        ({"at": ["2027-03-28T00:30"], "degrees": [1]}, "no step is at 2027-03-28T00:30; take that row out"),
+        ({"at": ["2027-03-28T00:30"], "degrees": [1]}, "no step is at 2027-03-28T00:30 (line 2), the nearest, step "),
         ({"at": ["monday"], "degrees": [1]}, "expected a date, or a date and time, in column at, got 'monday'"),
         ({"at": CLOCKS, "degrees": [1, 2, "", 4, 5]}, 'expected a number, got ""'),
     ],
