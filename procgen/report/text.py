@@ -48,7 +48,7 @@ def verdict_text(verdict: Verdict, rows: int = 8) -> str:
         lines += [f"  {line}" for text in covered for line in _hung(text)]
     seen = list(_detectable(verdict.rows))
     if seen:
-        lines += ["", "Smallest departures that would have been found 9 times in 10:"]
+        lines += ["", "Smallest departures of all paths and steps together that would have been found 9 times in 10:"]
         lines += [f"  {line}" for line in seen]
     left = list(_not_judged(verdict.rows))
     if left:
