@@ -73,14 +73,14 @@ class Choice:
     def form(self, layout: Layout) -> Form:
         """The form of one table of all that is wanted; EnsembleError where the layout cannot hold it."""
         stamps = self.ensemble.stamps
-        layout.check(self.columns, stamps is not None)
+        layout.check(self.columns, stamps is not None, range(self.block.first_path, self.block.end_path))
         if layout.kind == "wide" and len(self.columns) > 1:
             names = ", ".join(column.name for column in self.columns)
             raise EnsembleError(f"a table of layout wide holds one series, got {names}; choose one (series, --series)")
         if layout.kind == "wide" and self.block.paths > MOST_COLUMNS - 2:
             raise EnsembleError(
                 f"a table with a column a path holds at most {MOST_COLUMNS - 2:,} paths, got {self.block.paths:,}; "
-                "choose fewer (paths, --paths), or another layout"
+                "choose fewer (paths, --paths), or another layout: few readers take more columns, whatever the format"
             )
         return form(layout, self.columns, stamps, self.block)
 

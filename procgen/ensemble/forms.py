@@ -276,8 +276,7 @@ class Wide(Form):
         return pa.schema([*self._index_fields(), *(_field(name, kind, column) for name in self._paths(self.whole))])
 
     def _paths(self, block: Block) -> list[str]:
-        word = self.layout.name("path")
-        return [f"{word}_{path}" for path in range(block.first_path, block.end_path)]
+        return [self.layout.of_path(path) for path in range(block.first_path, block.end_path)]
 
     def pieces(self, row_bytes: int) -> Iterator[Block]:
         yield from _ranges(self.whole, row_bytes)

@@ -101,7 +101,7 @@ def render(
         raise EnsembleError(f"expected at most {MOST} paths and steps, got {whole}")
     if out is None:
         return _in_memory(source, whole, progress)
-    asked.check(source.columns, source.stamps is not None)
+    asked.check(source.columns, source.stamps is not None, range(whole.first_path, whole.end_path))
     asked.check_files(whole.file(whole), source.columns)
     job = Job(spec, source, whole, Folder(folder), names, asked, factory)
     if workers is None and scheduler is None:

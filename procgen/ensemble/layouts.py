@@ -96,6 +96,14 @@ class Layout:
             return self.renamed.get("step", self.renamed.get("time", "step"))
         return self.renamed.get(role, role)
 
+    def of_path(self, path: int) -> str:
+        """The name of the column of a path, where each has one."""
+        return f"{self.name('path')}_{path}"
+
+    def _is_of_path(self, name: str, paths: range) -> bool:
+        number = name.rpartition("_")[2]
+        return number.isdecimal() and int(number) in paths and name == self.of_path(int(number))
+
     def index(self, stamped: bool) -> dict[str, str]:
         """Roles of the columns that say where a row belongs, and their names, in order."""
         if self.kind == "panel":
@@ -110,8 +118,8 @@ class Layout:
         held = [(column,) for column in columns] if self.kind == "wide" else owned(columns)
         return {f"{some[0].name}.{part}": some for some in held}
 
-    def check(self, columns: Sequence[Column], stamped: bool) -> None:
-        """EnsembleError when an ensemble of these columns cannot have this layout."""
+    def check(self, columns: Sequence[Column], stamped: bool, paths: range) -> None:
+        """EnsembleError when an ensemble of these columns and paths cannot have this layout."""
         if "time" in self.renamed and not stamped and self.kind != "panel":
             raise EnsembleError(
                 "the spec has no start, so that there is no time to give another name; name the step, or give a start"
@@ -122,7 +130,9 @@ class Layout:
         names = [*self.index(stamped).values()]
         if self.kind == "panel":
             names += [self.name("value"), *dict.fromkeys(label for some in owned(columns) for label in labels(some))]
-        elif self.kind != "wide":
+        elif self.kind == "wide":
+            names += [name for name in names if self._is_of_path(name, paths)]
+        else:
             names += [column.name for column in columns]
         for name, count in Counter(names).items():
             if count > 1:

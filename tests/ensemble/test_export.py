@@ -293,6 +293,7 @@ def test_a_header_is_a_text_and_never_a_formula(tmp_path, demand):
         ("x.csv", {"layout": "nested"}, r"x\.csv cannot hold lists in cells; write \.parquet"),
         ("x.xlsx", {"layout": "nested"}, r"x\.xlsx cannot hold lists in cells"),
         ("x.csv", {"columns": {"path": "tea"}}, "2 columns of layout long would be called 'tea'"),
+        ("x.csv", {"layout": "wide", "series": "tea", "columns": {"path": "p", "step": "p_3"}}, "be called 'p_3'"),
         ("x.npy", {"layout": "long"}, r"an \.npy file is an array"),
         ("x.npy", {"local_time": True}, r"an \.npy file is an array"),
     ],

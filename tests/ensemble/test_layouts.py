@@ -506,6 +506,7 @@ def test_an_ensemble_written_before_there_were_layouts_is_the_usual_one(tmp_path
         ({"columns": {"path": ""}}, "expected a name for the column path, got ''"),
         ({"columns": {"path": "tea"}}, "2 columns of layout long would be called 'tea'; give one another name"),
         ({"layout": "panel", "columns": {"id": "path"}}, "2 columns of layout panel would be called 'path'"),
+        ({"layout": "wide", "columns": {"step": "r_3", "path": "r"}}, "2 columns of layout wide would be called 'r_3'"),
         ({"layout": "panel", "columns": {"step": "t"}}, "layout panel has time and no step here"),
         ({"layout": "panel", "columns": {"value": "mood"}, "reveal": REVEAL}, "would be called 'mood'"),
         ({"reveal": "tea"}, "cannot reveal: tea is a series, which is written anyway; give tea.LABEL"),
