@@ -352,10 +352,11 @@ def test_one_digest_is_not_that_of_all_variants(folder, tmp_path):
 
 
 def _rewritten(file: Path, change) -> None:
-    """The file with a changed table, its metadata as they were."""
-    table = pq.read_table(file)
-    frame = table.to_pandas()
-    pq.write_table(pa.Table.from_pandas(change(frame), table.schema, preserve_index=False), file)
+    """The file with a changed table, what its footer says as it was."""
+    table, said = pq.read_table(file), pq.read_metadata(file).metadata
+    changed = pa.Table.from_pandas(change(table.to_pandas()), table.schema, preserve_index=False)
+    said = {key: text for key, text in said.items() if key.startswith(b"procgen")}
+    pq.write_table(changed.replace_schema_metadata(said), file)
 
 
 def _other_value(name: str):
@@ -403,3 +404,15 @@ def test_a_damaged_file_is_named_and_nothing_said_to_be_equal(copy, damage):
     assert "b does not hold what its manifest says: " in result.out and result.out.count(copy.name) == 1
     data = json.loads(Result("difference", copy.parents[1] / "a", copy.parent, "--json").out)
     assert data["equal"] is False and [one["state"] for one in data["series"]] == ["unread", "unread"]
+
+
+def test_the_last_line_of_digest_says_what_failed(copy):
+    _rewritten(copy, _other_value("load.ar"))
+    result = Result("digest", copy.parent, "--expect", pg.open_ensemble(copy.parent).digest)
+    lines = result.out.splitlines()
+    assert result.code == 1 and "series load.ar has other values" in lines[0] and "as expected" in lines
+    assert lines[-1] == "not in order: load.ar, as said above"
+    copy.write_bytes(copy.read_bytes()[:1000])
+    result = Result("digest", copy.parent, "--expect", "a" * 64)
+    assert result.code == 1 and result.out.endswith("not all of it can be read\n")
+    assert result.out.count(copy.name) == 1

@@ -92,7 +92,9 @@ class DigestResult:
         if self.digest is not None:
             verdict = "as recorded" if self.digest == self.recorded else f"recorded was {self.recorded}"
             lines.append(f"{self.digest}  {verdict}")
-        if self.expected is not None:
+        if self.expected is not None and self.digest is None:
+            lines.append(f"expected {self.expected}: what there is has no digest, since not all of it can be read")
+        elif self.expected is not None:
             same = self.expected == self.digest
             lines.append("as expected" if same else self.departure or f"expected {self.expected}: other values")
         if self.difference is not None:
@@ -100,6 +102,9 @@ class DigestResult:
         elif self.redrawn:
             paths = sum(block.paths for block in self.redrawn)
             lines.append(f"drawn again: {paths} paths, all the same bits")
+        if self.damages and self.digest is not None:
+            names = dict.fromkeys(damage.series or damage.file for damage in self.damages)
+            lines.append(f"not in order: {', '.join(names)}, as said above")
         return "\n".join(lines)
 
 
