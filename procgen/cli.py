@@ -195,8 +195,12 @@ def validate(
     time_col: Annotated[str | None, typer.Option(metavar="NAME", help="Column of DATA with the time instead.")] = None,
     series_col: Annotated[
         list[str] | None,
-        typer.Option(metavar="SERIES=NAME", help="Column of DATA with a series; may be given again for others."),
+        typer.Option(metavar="SERIES=NAME", help="Column of DATA with a series, or its id; may be given again."),
     ] = None,
+    id_col: Annotated[
+        str | None, typer.Option(metavar="NAME", help="Column of DATA that says whose its value is.")
+    ] = None,
+    value_col: Annotated[str | None, typer.Option(metavar="NAME", help="Column of DATA with that value.")] = None,
     false_alarm: Annotated[
         float, typer.Option(metavar="P", help="Chance of a false alarm over all checks.", min=1e-12, max=0.5)
     ] = 0.001,
@@ -209,6 +213,9 @@ def validate(
 ) -> None:
     """Compare paths with the theory of their spec.
 
+    DATA has a row a path and step and a column a series (layout long), a row an observation with its id and value
+    (panel), or, for one series, a row a step and a column a path such as path_0 (wide).
+
     Ends with exit code 0 when they agree, 1 when they depart, 2 when it cannot be judged.
     """
     import procgen as pg
@@ -217,7 +224,7 @@ def validate(
 
     if report is not None:
         page_place(report)
-    roles = {"path": path_col, "step": step_col, "time": time_col}
+    roles = {"path": path_col, "step": step_col, "time": time_col, "id": id_col, "value": value_col}
     columns = {role: name for role, name in roles.items() if name is not None} | dict(map(column_of, series_col or ()))
     stated = None if spec is None else pg.load(spec)
     with progress("reading") as tick:

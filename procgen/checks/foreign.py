@@ -1,4 +1,4 @@
-"""Anyone's table as an ensemble: a DataFrame, CSV or Parquet in long form, any row order, any column names.
+"""Anyone's table as an ensemble: a DataFrame, CSV or Parquet, any row order, any column names.
 
 Everything that is wrong with it is named: paths and steps that are missing or there twice, times off the grid,
 text where numbers should be.
@@ -6,9 +6,8 @@ text where numbers should be.
 
 from __future__ import annotations
 
-import difflib
 import re
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Iterator, Mapping
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -20,86 +19,37 @@ from procgen.checks.clock import ClockError, NoTime, Times, mismatch, refuse_num
 from procgen.checks.files import TableError, read_file
 from procgen.checks.gather import Gather
 from procgen.checks.lane import Progress, in_one_process
+from procgen.checks.reshaped import LONG, Panel, Wide, recognised
+from procgen.checks.roles import Names, listed, option
 from procgen.checks.verdict import Check
-from procgen.checks.words import joined, many
+from procgen.checks.words import many
 from procgen.ensemble.plan import Block
 
 if TYPE_CHECKING:
     import pandas as pd
 
-_FEW = 12  # columns, up to which all are listed
 _DECIMAL_COMMA = re.compile(r"[+-]?[\d.]*,\d+")
 BLOCK = 1 << 22  # values of one series that are handed on at once
 
 
 def read_table(path: Path, spec: Any, columns: Mapping[str, str] | None) -> Table:
     """The table in a CSV or Parquet file; only the columns that are needed are read."""
-    frame, wanted = read_file(path, lambda found: Names(found, spec, columns, path.name))
-    return Table(frame, wanted, spec, str(path))
+    frame, wanted = read_file(path, lambda found: recognised(found, spec, columns, path.name))
+    return Table(*_long(frame, wanted), spec, str(path))
 
 
 def from_frame(frame: pd.DataFrame, spec: Any, columns: Mapping[str, str] | None) -> Table:
-    """A DataFrame in long form; an index with names counts as columns."""
+    """A DataFrame, long or with a row an observation; an index with names counts as columns."""
+    if frame.columns.name == "path":  # as a wide frame of an ensemble has it
+        frame = frame.set_axis([c if isinstance(c, str) else f"path_{c}" for c in frame.columns], axis=1)
     if any(name is not None for name in frame.index.names):
         frame = frame.reset_index()
-    return Table(frame, Names([str(c) for c in frame.columns], spec, columns, "the table"), spec, "the table")
+    wanted = recognised([str(c) for c in frame.columns], spec, columns, "the table")
+    return Table(*_long(frame, wanted), spec, "the table")
 
 
-class Names:
-    """Which column of the table is what."""
-
-    def __init__(self, found: list[str], spec: Any, given: Mapping[str, str] | None, where: str):
-        given = {k: v for k, v in (given or {}).items() if v is not None}
-        known = {"path", "step", "time", *spec.series}
-        for role in given:
-            if role not in known:
-                raise TableError(
-                    f"expected one of path, step, time, {', '.join(spec.series)} to be mapped, got {role!r}"
-                )
-        self.found, self.where = found, where
-        self.path = self._pick("path", given, False)
-        timed = "time" in given and "step" not in given  # a column that is named goes before one that is only there
-        self.step = None if timed else self._pick("step", given, False)
-        self.time = None if self.step else self._pick("time", given, False)
-        self.clock = self._pick("time", given, False) if self.step else None  # to be compared with the steps
-        self.series = {name: self._pick(name, given, True) for name in spec.series}
-        self.all = [c for c in (self.path, self.step, self.time, self.clock, *self.series.values()) if c is not None]
-
-    def _pick(self, role: str, given: Mapping[str, str], needed: bool) -> Any:
-        name = given.get(role, role)
-        places = [str(k) for k, found in enumerate(self.found, 1) if found == name]
-        if len(places) > 1:
-            raise TableError(
-                f"{self.where} has {len(places)} columns named {name!r}, columns {joined(places)}; rename or drop all "
-                f"but the one for {role}"
-            )
-        if places:
-            return name
-        if needed or role in given:
-            from procgen.spec.words import did_you_mean
-
-            hint = did_you_mean(name, self.found)
-            raise TableError(
-                f"{self.where} has no column {name!r} for {role}; its {listed(name, self.found)}"
-                + (f" ({hint})" if hint else "")
-                + f"; {_option(role)}"
-            )
-        return None
-
-
-def listed(name: str, found: Sequence[Any]) -> str:
-    """The columns of a table in words: all of few, or their number and the five nearest to a name."""
-    columns = [str(column) for column in found]
-    if len(columns) <= _FEW:
-        return f"columns are {', '.join(columns)}"
-    near = difflib.get_close_matches(name, columns, n=5, cutoff=0.0)
-    return f"{len(columns)} columns have none of that name, the nearest are {', '.join(near)}"
-
-
-def _option(role: str) -> str:
-    """How to say which column is what."""
-    option = f"--{role}-col NAME" if role in ("path", "step", "time") else f"--series-col {role}=NAME"
-    return f'name the right one with {option} (columns={{"{role}": NAME}})'
+def _long(frame: pd.DataFrame, wanted: Names | Panel | Wide) -> tuple[pd.DataFrame, Names]:
+    return (frame, wanted) if isinstance(wanted, Names) else wanted.long(frame)
 
 
 class Table:
@@ -123,7 +73,7 @@ class Table:
         if self.paths * self.steps > 4 * len(frame) + 1_000_000:
             raise TableError(
                 f"{where}: {len(frame)} rows cannot be {self.paths} paths of {self.steps} steps; "
-                f"is the right column taken for the step? {_option('step')}"
+                f"is the right column taken for the step? {option('step')}"
             )
         self.rows = self.paths * self.steps
         self.short = _absent_steps(self.steps, spec.time.steps)
@@ -132,7 +82,7 @@ class Table:
         if names.path is None and len(np.unique(step)) < len(step):
             raise TableError(
                 f"{where}: steps repeat, and there is no column path; {listed('path', names.found)}; "
-                f"{_option('path')}"
+                f"{option('path')}"
             )
         self._place(path, step)
         self._values = {name: self._numbers(frame[column], name) for name, column in names.series.items()}
@@ -218,7 +168,7 @@ class Table:
             times = Times(column, self.spec.time.zone)
             return steps_on_grid(times, self.spec.time)
         except NoTime as error:
-            other = f"{_option('time')}, or one of whole steps with --step-col NAME"
+            other = f"{option('time')}, or one of whole steps with --step-col NAME"
             raise TableError(f"{self.where}: {error}; {other}") from None
         except ClockError as error:
             raise TableError(f"{self.where}: {error}") from None
@@ -272,6 +222,10 @@ class Table:
 
         if column.dtype.kind == "c":
             raise TableError(f"{self.where}: {name} holds complex numbers; expected real ones (give .real or .imag)")
+        if column.dtype.kind == "O" and isinstance(column.iloc[0], list | np.ndarray):
+            raise TableError(
+                f"{self.where}: {name} holds lists (layout nested); {LONG}: a row a path and step, one number in each"
+            )
         values = pd.to_numeric(column, errors="coerce").to_numpy(dtype=float, na_value=np.nan)
         text = np.isnan(values) & column.notna().to_numpy()
         if text.any():

@@ -63,7 +63,7 @@ def origin(data: Any, spec: Any, columns: Mapping[str, str] | None) -> Origin:
         if columns:
             raise TableError(
                 f"an ensemble knows its own columns, so that none can be named for it, got {dict(columns)}; leave out "
-                "columns= (--path-col, --step-col, --time-col, --series-col)"
+                "columns= (--path-col, --step-col, --time-col, --series-col, --id-col, --value-col)"
             )
         return EnsembleOrigin(data, spec)
     if hasattr(data, "columns") and hasattr(data, "iloc"):

@@ -32,6 +32,7 @@ from procgen.checks.verdict import Check, Verdict
 from procgen.ensemble.plan import Block
 
 _PATH = re.compile(r"\b(paths? )(\d+(?: and \d+)?)\b")
+_WORST = "worst: path "
 _LONGEST = 1 << 14  # steps over which the end of a forgotten start is looked for
 
 Tick = Callable[[int, int], None]
@@ -52,13 +53,15 @@ def validate(
     Parameters
     ----------
     data : Ensemble, DataFrame, or path
-        An ensemble (or its folder), or anyone's long table: a DataFrame, a CSV or a Parquet file.
+        An ensemble (or its folder), or anyone's table: a DataFrame, a CSV or a Parquet file, with a column a series
+        (long), a row an observation (panel) or, for one series, a column a path (wide).
     spec : Spec or path, optional
         What the data should follow; an ensemble knows its own.
     false_alarm : float in (0, 1)
         Probability, at most, with which data of exactly the stated behaviour are said to depart.
     columns : mapping, optional
-        For a table: where "path", "step" or "time", and each series are found, e.g. {"path": "run", "x": "value"}.
+        For a table: where "path", "step" or "time", and each series are found, e.g. {"path": "run", "x": "load"}; of
+        a panel also "id" and "value", and which id a series is.
     progress : callable, optional
         Called with (rows done, rows in all).
     workers : int, optional
@@ -94,7 +97,7 @@ def validate(
 def _as_known(row: Check, origin: Any) -> None:
     """Put the names that the reader knows in the place of ours: of series, and of the paths of a table."""
     labels = getattr(origin, "labels", None)
-    if labels is not None and row.series and row.kind in ("structure", "law"):
+    if labels is not None and row.series and (row.kind in ("structure", "law") or row.probe.startswith(_WORST)):
         row.note, row.probe = (_PATH.sub(partial(_labelled, labels), text) for text in (row.note, row.probe))
     row.series = " ~ ".join(origin.columns.get(name, name) for name in row.series.split(" ~ "))
     for name in sorted(origin.columns, key=len, reverse=True):

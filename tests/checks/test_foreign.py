@@ -47,6 +47,44 @@ def test_other_names_order_and_labels(frame, tmp_path):
             assert found[key] == pytest.approx(expected[key], rel=1e-9)
 
 
+def judged(verdict):
+    return [(row.series, row.what, row.probe, row.p) for row in verdict.rows if row.p is not None]
+
+
+def test_a_row_an_observation_is_judged_as_a_column_a_series(frame, tmp_path):
+    utc = pd.to_datetime(SPEC.time.stamps(0, 60), unit="us", utc=True).strftime("%Y-%m-%dT%H:%M:%SZ").to_numpy()
+    panel = frame.assign(time=utc[frame["step"]]).drop(columns="step").melt(["path", "time"], ["x", "y"], "id", "value")
+    found = judged(validate(frame, SPEC))
+    panel.sample(frac=1, random_state=2).to_csv(tmp_path / "p.csv", index=False)
+    renamed = panel.replace({"id": {"x": "north"}}).rename(columns={"id": "meter", "value": "kw", "path": "run"})
+    names = {"id": "meter", "value": "kw", "path": "run", "x": "north"}
+    for verdict in (validate(tmp_path / "p.csv", SPEC), validate(renamed, SPEC, columns=names)):
+        assert judged(verdict) == found
+    short = validate(pd.concat([panel.drop(index=7), panel.iloc[[3]]]), SPEC)
+    assert short.agrees is False
+    assert any("1 row is there twice, the first path 0, step 3" in row.note for row in short.rows)
+    for table, columns, message in (
+        (panel[panel["id"] == "x"], None, "no rows whose id is 'y', for the series y; it has x; .* --series-col y=ID"),
+        (panel, {"value": "kw"}, "no column 'kw' for value; .* --value-col NAME"),
+        (panel.astype({"value": str}).replace({"value": panel["value"].astype(str)[5]}, "?"), None, "got '.' in row 5"),
+    ):
+        with pytest.raises(TableError, match=message):
+            validate(table, SPEC, columns=columns)
+
+
+def test_a_column_a_path_is_one_series(frame):
+    one = read_spec({**RAW, "series": {"x": RAW["series"]["x"]}})
+    wide = frame.pivot(index="step", columns="path", values="x")
+    named = wide.rename(columns="path_{}".format).reset_index()
+    for table in (wide, named):
+        assert judged(validate(table, one)) == judged(validate(frame, one))
+    with pytest.raises(TableError, match=r"a column a path \(layout wide\), .* the spec has 2: x and y; expected a"):
+        validate(named, SPEC)
+    nested = frame.groupby("path").agg(list).reset_index()[["path", "x"]]
+    with pytest.raises(TableError, match=r"x holds lists \(layout nested\); expected a column a series, .* long"):
+        validate(nested, one)
+
+
 @pytest.mark.parametrize("style", ["utc", "naive utc", "local", "offset"])
 def test_times_as_text(frame, style, tmp_path):
     utc = pd.to_datetime(SPEC.time.stamps(0, 60), unit="us", utc=True)
@@ -104,7 +142,7 @@ def test_text_and_empty_cells_are_named(frame, tmp_path):
         (lambda f: f, {"path": "run"}, "no column 'run' for path.*with --path-col NAME"),
         (lambda f: f, {"step": "hour"}, "no column 'hour' for step.*with --step-col NAME"),
         (lambda f: f, {"time": "at"}, "no column 'at' for time.*with --time-col NAME"),
-        (lambda f: f, {"z": "x"}, "expected one of path, step, time, x, y to be mapped, got 'z'"),
+        (lambda f: f, {"z": "x"}, "expected one of path, step, time, id, value, x, y to be mapped, got 'z'"),
         (lambda f: f.assign(step=f["step"] * 1000), None, "is the right column taken for the step.*--step-col NAME"),
         (lambda f: f.assign(step=f["step"] + 0.5), None, "whole steps in step, got 0.5 in row 0; .*--step-col"),
         (lambda f: f.assign(step=f["step"] - 3), None, "expected steps from 0 on in step, got -3"),
