@@ -68,6 +68,7 @@ def test_whole_numbers_are_int64(series):
         [{"round": {"of": [NOISE], "to": 0.5}}],
         [{"poisson": {"mean": 3}}, {"constant": 0.5}],
         [{"clip": {"of": [{"poisson": {"mean": 3}}], "high": 2.5}}],
+        [{"integrate": {"of": [{"poisson": {"mean": 3}}]}}],  # whole, and not known to be
         [{"constant": 1e18}],  # bounded, and beyond what float64 counts
         [{"intermittent": {"share": 0.3, "size": 4, "sd": 2}}],
         [{"constant": 0.1}, {"constant": 0.9, "as": "rest"}, {"poisson": {"mean": 3}}],
