@@ -54,11 +54,13 @@ class Choice:
         for name in names or ():
             if name not in known:
                 raise EnsembleError(f"expected a series among {', '.join(known)}, got {name!r}")
+            if names is not None and list(names).count(name) > 1:
+                raise EnsembleError(f"expected each series once, got {name} {list(names).count(name)} times")
         if names is not None and not names:
             raise EnsembleError(f"expected at least one series among {', '.join(known)}")
         first_path, end_path = _inside("paths", paths, whole.first_path, whole.end_path)
         first_step, end_step = _inside("steps", steps, whole.first_step, whole.end_step)
-        columns = tuple(known[name] for name in dict.fromkeys(known if names is None else names))
+        columns = tuple(known[name] for name in (known if names is None else names))
         if decimals is not None:
             if isinstance(decimals, bool) or not isinstance(decimals, int) or not -22 <= decimals <= 22:
                 raise EnsembleError(f"expected decimals to be a whole number from -22 to 22, got {decimals!r}")

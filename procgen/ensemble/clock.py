@@ -58,6 +58,11 @@ class Clock:
         utc = np.asarray(self.stamps(block.first_step, block.steps), np.int64)
         return bool((np.diff(np.sort(utc + self._offsets(utc))) == 0).any())
 
+    def changes(self, block: Block) -> bool:
+        """Whether the clock is set forward or back within the steps of a rectangle."""
+        offsets_of = self._offsets(np.asarray(self.stamps(block.first_step, block.steps), np.int64))
+        return bool((offsets_of != offsets_of[0]).any())
+
     def _offsets(self, utc: np.ndarray) -> np.ndarray:
         return np.zeros_like(utc) if self.zone is None else offsets(self.zone, utc)
 

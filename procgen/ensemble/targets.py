@@ -78,6 +78,11 @@ class Csv(Target):
     def check(cls, path: Path, rows: Form, count: int) -> None:
         _refuse_lists(path, rows)
 
+    @classmethod
+    def notes(cls, clock: Clock, block: Block, column: str) -> Iterator[str]:
+        several = "; its offset changes on the way, which pandas.to_datetime reads with utc=True"
+        yield from (note + (several if clock.changes(block) else "") for note in super().notes(clock, block, column))
+
 
 class Sheet(Target):
     """One sheet of an Office Open XML workbook; numbers in full, times without a zone.

@@ -233,6 +233,16 @@ def test_local_times_have_their_offset_in_csv_and_their_zone_in_parquet(tmp_path
         "2027-03-28T04:00:00+02:00",
     ]
     assert np.array_equal(utc(pd.read_csv(path)).dt.tz_localize(None), demand.times())
+    from procgen.ensemble.export import export
+
+    told = "; its offset changes on the way, which pandas.to_datetime reads with utc=True"
+    for steps, end in ((None, told), (range(0, 5), "")):
+        ready = export(demand, tmp_path / "other.csv", local_time=True, steps=steps)
+        assert ready.text().endswith(f"note: time is the local time of Europe/Berlin{end}")
+    frame = pd.read_csv(path)
+    with pytest.raises(ValueError):
+        pd.to_datetime(frame["time"])
+    assert np.array_equal(pd.to_datetime(frame["time"], utc=True).dt.tz_localize(None), demand.times())
     times = read(demand.export(tmp_path / "values.parquet", local_time=True, paths=range(1)))["time"]
     assert str(times.dt.tz) == "Europe/Berlin" and times[9] == pd.Timestamp("2027-03-28T04:00", tz="Europe/Berlin")
     assert read(demand.export(tmp_path / "utc.csv"))["time"][0] == "2027-03-26T23:00:00Z"
@@ -284,6 +294,7 @@ def test_a_header_is_a_text_and_never_a_formula(tmp_path, demand):
         ("x.ods", {}, r"expected a file that ends in \.csv, \.xlsx, \.parquet or \.npy, got 'x\.ods'"),
         ("no/x.csv", {}, "there is no folder .*no to write x.csv into; make it first"),
         ("x.csv", {"series": "milk"}, "expected a series among tea, coffee, guests, got 'milk'"),
+        ("x.csv", {"series": ["tea", "guests", "tea"]}, "expected each series once, got tea 2 times"),
         ("x.csv", {"series": []}, "expected at least one series among"),
         ("x.csv", {"paths": range(10, 31)}, "expected paths within 0 to 29, got 10 to 30"),
         ("x.csv", {"steps": range(0)}, "expected steps within 0 to 19, got none"),
