@@ -25,6 +25,7 @@ from procgen.terms.given import spec_of
 from procgen.terms.recipe import Recipe, recipes
 
 HANDFUL = 5
+DATA = (".csv", ".parquet", ".xlsx", ".npy")
 Tick = Callable[[int, int], None]
 
 
@@ -303,6 +304,11 @@ def _side(given: Any) -> Side:
             return _of_manifest(path)
         if isinstance(path, Remote):
             raise EnsembleError(f"there is no ensemble at {path}; give the URL of one, or a spec on this machine")
+        if path.suffix.lower() in DATA:
+            raise EnsembleError(
+                f"{path} is a file of values, and these are compared with a spec: procgen validate {path} --spec SPEC; "
+                "give a spec, the folder of an ensemble, or its manifest.json"
+            )
         return Side(str(path), spec_of(given), None)
     spec = spec_of(given)
     variant = spec.written.variant if spec.written is not None else ""

@@ -131,6 +131,7 @@ def check_digest(
     """
     wanted = None if expect is None else read_expected(expect)
     folder = Folder(_home(path) if isinstance(path, Ensemble) else folder_path(path, "path"))
+    folder.refuse_file()
     path = str(folder.path)
     data = folder.read_json(MANIFEST)
     if data is None:

@@ -287,6 +287,7 @@ def open_ensemble(path: str | Place) -> OnDisk:
     or when it was drawn with another stream version.
     """
     folder = Folder(folder_path(path, "path"))
+    folder.refuse_file()
     data = folder.read_json(MANIFEST)
     if data is None:
         unfinished = (folder.path / PLAN).exists()

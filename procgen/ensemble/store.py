@@ -105,6 +105,13 @@ class Folder:
             raise EnsembleError(f"{path} holds {type(data).__name__}, expected a JSON object")
         return data
 
+    def refuse_file(self) -> None:
+        """EnsembleError when a file was given where an ensemble is to be read."""
+        if isinstance(self.path, Path) and self.path.is_file():
+            raise EnsembleError(
+                f"{self.path} is a file; expected the folder of an ensemble, as procgen render SPEC -o OUT makes one"
+            )
+
     def size(self, name: str) -> int:
         """Bytes of a file, -1 when it is not there."""
         try:

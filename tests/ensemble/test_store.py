@@ -13,7 +13,7 @@ import numpy as np
 import pandas as pd
 import pytest
 
-from procgen.ensemble import EnsembleError, open_ensemble, plan
+from procgen.ensemble import EnsembleError, check_digest, open_ensemble, plan
 from procgen.ensemble.parquet import footer
 from procgen.ensemble.plan import STEPS
 from procgen.ensemble.store import PART
@@ -195,6 +195,9 @@ def test_out_that_is_a_file_is_refused(tmp_path):
     for out in ("out", "out/below"):
         with pytest.raises(EnsembleError, match="out is not a folder; choose another OUT"):
             fake_render(fake_spec(paths=20, steps=5), tmp_path / out, overwrite=True)
+    for reads in (open_ensemble, check_digest):
+        with pytest.raises(EnsembleError, match="out is a file; expected the folder of an ensemble"):
+            reads(tmp_path / "out")
     assert (tmp_path / "out").read_text() == "mine"
 
 
