@@ -59,6 +59,9 @@ Scheduler = Annotated[
     str | None,
     typer.Option(metavar="local|ADDRESS", help="Work on a Dask cluster: the one there, or one started here."),
 ]
+Overwrite = Annotated[
+    bool, typer.Option("--overwrite", help="Replace a FILE that procgen did not write; its own it replaces.")
+]
 Json = Annotated[bool, typer.Option("--json", help="Print JSON instead of text.")]
 
 
@@ -145,6 +148,8 @@ def render(
     from procgen.report.rendered import rendered
 
     specs = asked(spec, variant, setting, start, {"paths": paths, "steps": steps, "seed": seed})
+    if variant == "all" and len(specs) == 1:
+        said(f"the spec has no variants; {within(out, 'base')} has it as written, and there is nothing beside it")
     wanted = None if expect is None else expected(expect, specs)
     for name, loaded in specs.items():
         folder = within(out, name)
@@ -210,6 +215,7 @@ def validate(
     scheduler: Scheduler = None,
     json: Json = False,
     report: Annotated[Path | None, typer.Option(metavar="FILE.html", help="Also write an HTML report.")] = None,
+    overwrite: Overwrite = False,
 ) -> None:
     """Compare paths with the theory of their spec.
 
@@ -223,13 +229,13 @@ def validate(
     from procgen.report.rendered import verdict_json
 
     if report is not None:
-        page_place(report)
+        page_place(report, overwrite)
     roles = {"path": path_col, "step": step_col, "time": time_col, "id": id_col, "value": value_col}
     columns = {role: name for role, name in roles.items() if name is not None} | dict(map(column_of, series_col or ()))
     stated = None if spec is None else pg.load(spec)
     with progress("reading") as tick:
         verdict = pg.validate(data, stated, false_alarm, columns or None, tick, workers, scheduler)
-    written = None if report is None else f"report: {verdict.to_html(report)}"
+    written = None if report is None else f"report: {verdict.to_html(report, overwrite)}"
     printed(verdict_json(verdict) if json else verdict.to_text())
     if written:
         said(written) if json else printed(f"\n{written}")
@@ -252,10 +258,11 @@ def picture(
             "-o",
             "--out",
             metavar="FILE",
-            help="File to write, replacing what is there: .html (a page), .svg, or .png (needs the extra plots).",
+            help="File to write: .html (a page), .svg, or .png (needs the extra plots).",
             show_default=False,
         ),
     ],
+    overwrite: Overwrite = False,
     start: Start = None,
     variant: Variant = None,
     setting: Settings = None,
@@ -271,7 +278,8 @@ def picture(
     if other and place_of(source).is_dir():
         raise typer.BadParameter("an ensemble is drawn as it is; give a spec with --variant, --set and --start")
     with progress("reading") as tick:
-        printed(f"picture: {draw(one_asked(Path(source), variant, setting, start) if other else source, out, tick)}")
+        what = one_asked(Path(source), variant, setting, start) if other else source
+        printed(f"picture: {draw(what, out, tick, overwrite)}")
 
 
 @app.command(

@@ -279,6 +279,14 @@ def test_render_writes_a_variant_or_all_of_them_and_validate_reads_its_own_spec(
         assert run("validate", tmp_path / "all" / folder).exit_code in (0, 2)  # few paths: never departing
 
 
+def test_all_variants_of_a_spec_without_any_are_remarked_on(tmp_path):
+    (tmp_path / "a.yaml").write_text("{procgen: 1, seed: 1, paths: 2, time: {steps: 2}, series: {x: [{constant: 1}]}}")
+    out = tmp_path / "out"
+    made = CliRunner().invoke(app, ["render", str(tmp_path / "a.yaml"), "--variant", "all", "-o", str(out)])
+    assert made.exit_code == 0 and (out / "base" / "manifest.json").exists()
+    assert f"the spec has no variants; {out / 'base'} has it as written" in made.stderr
+
+
 def test_start_moves_the_dates_and_no_deterministic_step_of_the_clock(spec, tmp_path):
     out = tmp_path / "later"
     result = CliRunner().invoke(app, ["render", spec.file, "--start", "2028-02-01T12:00", "-o", str(out)])
