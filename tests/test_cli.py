@@ -68,9 +68,10 @@ def test_the_options_are_those_that_were_promised():
     promised = {
         "render": "-o --paths --first-path --steps --seed --workers --layout --reveal --resume --overwrite --scheduler "
         "--columns --partition --variant --set --start --expect",
-        "validate": "--spec --path-col --step-col --time-col --series-col --false-alarm --json --report --scheduler",
+        "validate": "--spec --path-col --step-col --time-col --series-col --id-col --value-col --false-alarm --json "
+        "--report --overwrite --scheduler",
         "theory": "--json --at --lags --frequencies --horizon --variant --set --start",
-        "picture": "-o --variant --set --start",
+        "picture": "-o --overwrite --variant --set --start",
         "digest": "--expect --redraw",
         "export": "-o --layout --series --paths --steps --decimals --local-time --columns --overwrite",
         "difference": "--variant --at --json",

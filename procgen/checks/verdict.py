@@ -184,14 +184,15 @@ class Verdict:
 
         return verdict_text(self, rows)
 
-    def to_html(self, path: str | Path) -> Path:
+    def to_html(self, path: str | Path, overwrite: bool = False) -> Path:
         """Write the verdict, with pictures of what it saw, as one self-contained page; returns its path.
 
-        Raises PictureError when it cannot be written.
+        A file that is there is replaced where procgen wrote it, any other one with `overwrite`. Raises PictureError
+        when it cannot be written.
         """
         from procgen.report.html import write_verdict
 
-        return write_verdict(self, Path(path))
+        return write_verdict(self, Path(path), overwrite)
 
     def __str__(self) -> str:
         return self.to_text()

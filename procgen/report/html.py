@@ -18,7 +18,7 @@ from procgen.report.pictures import page
 from procgen.report.pictures.gallery import Gallery
 from procgen.report.pictures.page_style import PAGE
 from procgen.report.pictures.safe import breakable, escaped
-from procgen.report.pictures.write import write
+from procgen.report.pictures.write import MARKS, write
 from procgen.report.text import CAUTION, reported
 
 if TYPE_CHECKING:
@@ -53,9 +53,9 @@ _CAUTIONS = (
 )
 
 
-def write_verdict(verdict: Verdict, path: Path) -> Path:
+def write_verdict(verdict: Verdict, path: Path, overwrite: bool = False) -> Path:
     """Write the page of a verdict; the folder must exist. Returns the path."""
-    return write(path, verdict_page(verdict))
+    return write(path, verdict_page(verdict), overwrite)
 
 
 def verdict_page(verdict: Verdict) -> str:
@@ -70,7 +70,7 @@ def whole_page(gallery: Gallery | None, verdict: Verdict | None = None) -> str:
     judged = f" – {_TITLES[verdict.verdict]}" if verdict is not None else ""
     parts = [
         "<!doctype html>",
-        '<html lang="en"><head><meta charset="utf-8">',
+        f'<html lang="en"><head><meta charset="utf-8">{MARKS["html"]}',
         f'<meta http-equiv="Content-Security-Policy" content="{_POLICY}">',
         '<meta name="viewport" content="width=device-width, initial-scale=1">',
         f"<title>{title}{judged}</title>",

@@ -10,7 +10,9 @@ from pathlib import Path
 import pytest
 from typer.testing import CliRunner
 
+import procgen as pg
 from procgen.cli import app
+from procgen.report.pictures.write import PictureError
 from tests.report.pages import drawing, self_contained
 
 PUMP = str(Path(__file__).parent.parent.parent / "specs" / "pump-flow.yaml")
@@ -48,9 +50,25 @@ def test_a_spec_becomes_a_page_or_an_svg(tmp_path):
 def test_an_ensemble_becomes_a_page_with_its_verdict(out, tmp_path):
     page = tmp_path / "pump.html"
     page.write_text("what was there before")
-    assert Result("picture", out, "-o", page).code == 0
+    assert "--overwrite" in Result("picture", out, "-o", page).refused()
+    assert page.read_text() == "what was there before"
+    assert Result("picture", out, "-o", page, "--overwrite").code == 0
     text = " ".join(self_contained(page.read_text(encoding="utf-8")).text)
     assert "all 40 paths" in text and "Checks, the largest disagreement first" in text and "Parts of one path" in text
+
+
+@pytest.mark.parametrize("name", ["a.html", "a.svg", "a.png"])
+def test_what_procgen_wrote_is_replaced_and_nothing_else(name, tmp_path):
+    if name.endswith("png"):
+        pytest.importorskip("matplotlib", reason="the extra plots is not installed")
+    file = tmp_path / name
+    for _ in range(2):  # the second one in place of the first
+        assert Result("picture", PUMP, "-o", file).code == 0
+    file.write_bytes(file.read_bytes().replace(b"procgen", b"another"))
+    before = file.read_bytes()
+    said = Result("picture", PUMP, "-o", file).refused()
+    assert f"{file} is there already, and is no picture or page of procgen" in said
+    assert file.read_bytes() == before
 
 
 def test_a_png_by_matplotlib(out, tmp_path):
@@ -115,6 +133,17 @@ def test_validate_says_where_the_report_is(out, tmp_path):
     assert "all 40 paths" in " ".join(found.text)
     data = Result("validate", out, "--false-alarm", "1e-8", "--report", page, "--json")
     assert json.loads(data.out)["checks"] and data.err == f"procgen: report: {page}\n"
+
+
+def test_a_report_replaces_no_file_of_others_before_the_work(out, tmp_path):
+    page = tmp_path / "important.html"
+    page.write_text("important")
+    assert "choose another name" in Result("validate", out, "--report", page).refused()
+    with pytest.raises(PictureError, match="overwrite=True"):
+        pg.validate(out).to_html(page)
+    assert page.read_text() == "important"
+    assert Result("validate", out, "--false-alarm", "1e-8", "--report", page, "--overwrite").code in (0, 2)
+    assert "<html" in page.read_text(encoding="utf-8")
 
 
 def test_a_report_that_cannot_be_written_is_refused_before_the_work(out, tmp_path):

@@ -15,22 +15,22 @@ TABLES = (".csv", ".tsv", ".parquet", ".pq", ".gz")
 Tick = Callable[[int, int], None]
 
 
-def picture(source: str | Path | Spec, file: Path, progress: Tick | None = None) -> Path:
+def picture(source: str | Path | Spec, file: Path, progress: Tick | None = None, overwrite: bool = False) -> Path:
     """Draw a spec (a YAML file, or read already) or an ensemble (the place of a render) into `file`; returns its path.
 
     The suffix says what it becomes. A page of an ensemble has its verdict too, for which all of it is read; SVG and
-    PNG show pictures only. What was in `file` is replaced.
+    PNG show pictures only. A `file` that is there is replaced where procgen wrote it, any other one with `overwrite`.
 
     Raises PictureError, SpecError, EnsembleError.
     """
-    sort = sort_of(place_for(file))
+    sort = sort_of(place_for(file, overwrite))
     if isinstance(source, Spec):
-        return _drawn(source, file, sort, progress)
+        return write(file, _drawn(source, sort, progress), overwrite)
     place = place_of(source)
     if isinstance(place, Remote):
         if not place.is_dir():
             raise PictureError(f"there is no ensemble at {place}; give the URL of one, or a spec on this machine")
-        return _drawn(place, file, sort, progress)
+        return write(file, _drawn(place, sort, progress), overwrite)
     source = place
     if not source.exists():
         raise PictureError(f"there is no file or folder {source}; give a spec, or the folder of a render")
@@ -39,21 +39,21 @@ def picture(source: str | Path | Spec, file: Path, progress: Tick | None = None)
             f"{source} is a table and does not say what it should follow; write: "
             f"procgen validate {source} --spec SPEC --report FILE.html"
         )
-    return _drawn(source, file, sort, progress)
+    return write(file, _drawn(source, sort, progress), overwrite)
 
 
-def _drawn(source: Place | Spec, file: Path, sort: str, progress: Tick | None) -> Path:
+def _drawn(source: Place | Spec, sort: str, progress: Tick | None) -> str | bytes:
     if sort == "html":
-        return write(file, _page(source, progress))
+        return _page(source, progress)
     shown = _gallery(source)
     lines = [f"The pictures show {shown.sample.says}.", "Stated: blue. Seen: ink. What chance allows: grey."]
     if sort == "svg":
         from procgen.report.pictures.svg import poster
 
-        return write(file, poster(shown.title, lines, shown.groups))
+        return poster(shown.title, lines, shown.groups)
     from procgen.report.pictures.png import png
 
-    return write(file, png(shown.title, lines, shown.groups))
+    return png(shown.title, lines, shown.groups)
 
 
 def _gallery(source: Place | Spec) -> Gallery:

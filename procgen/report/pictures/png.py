@@ -12,7 +12,7 @@ import numpy as np
 from procgen.report.pictures.chart import Band, Cells, Chart, Dots, Line, Mark, Note, Stems
 from procgen.report.pictures.safe import visible
 from procgen.report.pictures.style import LIGHT
-from procgen.report.pictures.write import PictureError
+from procgen.report.pictures.write import MARKS, PictureError
 
 MOST = 60  # charts of one file: more would be too tall to open
 WIDE, HIGH, DPI = 5.6, 3.9, 110
@@ -44,7 +44,7 @@ def png(title: str, lines: Sequence[str], groups: Sequence[tuple[str, Sequence[C
     for place, (heading, chart) in enumerate(charts):
         _drawn(sheet.add_subplot(rows, 2, place + 1), heading, chart)
     out = BytesIO()
-    sheet.savefig(out, format="png", metadata={"Software": None})
+    sheet.savefig(out, format="png", metadata={"Software": MARKS["png"]})
     return out.getvalue()
 
 

@@ -12,6 +12,7 @@ from numpy.typing import ArrayLike, NDArray
 from procgen.report.pictures.chart import Band, Cells, Chart, Dots, Line, Mark, Note, Stems
 from procgen.report.pictures.safe import escaped, short, visible
 from procgen.report.pictures.style import FIGURE, variables
+from procgen.report.pictures.write import MARKS
 
 WIDE = 4800  # tenths of a unit
 LEFT, RIGHT, BELOW = 620, 4700, 380
@@ -56,6 +57,7 @@ def poster(title: str, lines: Sequence[str], groups: Sequence[tuple[str, Sequenc
             f'<svg xmlns="http://www.w3.org/2000/svg" viewBox="0 0 {width} {height}" width="{width // 10}" '
             f'height="{height // 10}" role="img" aria-labelledby="poster-t poster-d">',
             f'<title id="poster-t">{escaped(title)}</title><desc id="poster-d">{escaped(" ".join(lines))}</desc>',
+            MARKS["svg"],
             f"<style>{variables('svg')}{FIGURE}{_POSTER}</style>",
             f'<rect class="back" width="{width}" height="{height}"/>',
             *out,

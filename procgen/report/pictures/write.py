@@ -6,6 +6,12 @@ import os
 from pathlib import Path
 
 SORTS = (".html", ".svg", ".png")
+MARKS = {  # what says in a file that it is one of ours, which the next one may replace
+    "html": '<meta name="generator" content="procgen">',
+    "svg": "<metadata>procgen</metadata>",
+    "png": "procgen",  # as its Software
+}
+_HEAD = 1 << 16  # bytes in which a mark stands: a title may come before it
 
 
 class PictureError(ValueError):
@@ -20,25 +26,42 @@ def sort_of(path: Path) -> str:
     return suffix[1:]
 
 
-def page_place(path: Path) -> Path:
+def page_place(path: Path, overwrite: bool = False) -> Path:
     """The path, when a page can be put there: to be asked before the work that it is for."""
     if path.suffix.lower() not in (".html", ".htm"):
         raise PictureError(f"expected a file that ends in .html, got {path.name!r}")
-    return place_for(path)
+    return place_for(path, overwrite)
 
 
-def place_for(path: Path) -> Path:
-    """The path, when a file can be put there."""
+def place_for(path: Path, overwrite: bool = False) -> Path:
+    """The path, when a file can be put there: where none is, or one of ours, or any one that is to be replaced."""
     if path.is_dir():
         raise PictureError(f"{path} is a folder; give the name of a file in it, such as {path / 'picture.html'}")
     if not path.parent.is_dir():
         raise PictureError(f"there is no folder {path.parent} to write {path.name} into; make it first")
+    if path.exists() and not overwrite and not is_ours(path):
+        raise PictureError(
+            f"{path} is there already, and is no picture or page of procgen; choose another name, or replace it with "
+            "--overwrite (overwrite=True)"
+        )
     return path
 
 
-def write(path: Path, content: str | bytes) -> Path:
-    """Put the content there in one go, in place of what was there; returns the path."""
-    place_for(path)
+def is_ours(path: Path) -> bool:
+    """Whether a file says that procgen wrote it."""
+    try:
+        with path.open("rb") as file:
+            head = file.read(_HEAD)
+    except OSError:
+        return False
+    if head.startswith(b"\x89PNG"):
+        return b"tEXtSoftware\0" + MARKS["png"].encode() in head
+    return any(MARKS[sort].encode() in head for sort in ("html", "svg"))
+
+
+def write(path: Path, content: str | bytes, overwrite: bool = False) -> Path:
+    """Put the content there in one go, in place of what may be replaced; returns the path."""
+    place_for(path, overwrite)
     data = content.encode("utf-8") if isinstance(content, str) else content
     part = path.with_name(f".{path.name}.part")
     try:
