@@ -8,7 +8,7 @@ from pathlib import Path
 SORTS = (".html", ".svg", ".png")
 MARKS = {  # what says in a file that it is one of ours, which the next one may replace
     "html": '<meta name="generator" content="procgen">',
-    "svg": "<metadata>procgen</metadata>",
+    "svg": "<!-- procgen -->",
     "png": "procgen",  # as its Software
 }
 _HEAD = 1 << 16  # bytes in which a mark stands: a title may come before it
