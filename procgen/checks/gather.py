@@ -134,7 +134,7 @@ class Gather:
         }
         self.errors = {name: ErrorSums() for name in self.routes if name not in scores}
         self.events = {name: EventSums(way.watched) for name, way in self.routes.items() if way.watched}
-        self.events |= {missing.key(name): missing.GapSums(term) for name, term in plan.gaps.items()}
+        self.events |= missing.sums(plan.gaps)
         self.squares = {name: SquareSums(each) for name, each in plan.squares.items()}
         self.cross = {pair: sums_of(stated) for pair, stated in plan.shock_pairs.items()}
 

@@ -75,6 +75,7 @@ class Lane:
                     related[name] = x
             for relation in self.relations:
                 relation.absorb(related, self.step)
+            missing.join(self.plan, self.sums.events, self.step, self.events)
             self._pairs(count)
             self.step += count
             at += count

@@ -14,6 +14,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.checks import masks
 from procgen.checks.kalman import Kalman
 from procgen.checks.probes import _product_sds
 from procgen.checks.recover import Cannot, Expected, Route
@@ -138,20 +139,34 @@ def _along(x: NDArray, weights: NDArray) -> NDArray:
 
 
 class GapSums(EventSums):
-    """How often values are missing, given whether the value before was."""
+    """How often values are missing, given whether the value before was, and for how many steps up to it."""
 
     def __init__(self, term: Any):
-        super().__init__(term.watched)
         self.term = term
+        # gaps that all have the mean length go on as often as stated, over all steps up to it
+        self.limit = 1 if term.drawn or term.gap is None else max(1, int(term.gap) // 2)
+        upto = f"up to {self.limit} step{'' if self.limit == 1 else 's'}"
+        aged = () if term.drawn else (f"missing after missing, {each}" for each in (upto, "longer"))
+        super().__init__((*term.watched, *aged))
 
     def lane(self, paths: int) -> Any:
         return GapLane(super().lane(paths))
 
     def count(self, x: NDArray, first_step: int, lane: Any) -> None:
         """Add a tile of values (steps, paths), NaN where missing."""
-        steps = first_step + np.arange(len(x))
-        self.absorb(self.term.events(x, (x, x), (), lane.state, steps), first_step, lane.sums)
-        lane.state = {"on": np.isnan(x[-1:]).astype(float)}
+        gone, steps = np.isnan(x), first_step + np.arange(len(x))
+        seen = list(self.term.events(x, (x, x), (), lane.state, steps))
+        if not self.term.drawn:
+            age = _ages(gone, lane.age)
+            enter, stay = self.term.chain.chances
+            go_on = np.where(age[:-1] > 0, stay, np.nan)
+            seen += [(gone, np.where(old, go_on, np.nan)) for old in (age[:-1] <= self.limit, age[:-1] > self.limit)]
+            chance = np.where(age[:-1] > 0, stay, enter)
+            if first_step == 0:
+                chance[0] = self.term.share
+            lane.seen, lane.age = (gone, chance), age[-1]
+        self.absorb(seen, first_step, lane.sums)
+        lane.state = {"on": gone[-1:].astype(float)}
 
     def finish(self, lane: Any) -> None:
         super().finish(lane.sums)
@@ -172,6 +187,15 @@ class GapLane:
     def __init__(self, sums: NDArray):
         self.sums = sums
         self.state: Any = None
+        self.age: NDArray = np.zeros(sums.shape[-1], int)  # for how many steps values have been missing
+        self.seen: Any = None  # of the newest tile: what is missing, and the chance of it
+
+
+def _ages(gone: NDArray, age: NDArray) -> NDArray:
+    """(1 + steps, paths): for how many steps values have been missing before each step, and after the last."""
+    steps = np.arange(1, len(gone) + 1)[:, None]
+    there = np.maximum.accumulate(np.where(gone, -age, steps), axis=0)
+    return np.concatenate([age[None], steps - there])
 
 
 def key(series: str) -> str:
@@ -179,11 +203,23 @@ def key(series: str) -> str:
     return f"{series}: gaps"
 
 
+def sums(gaps: dict[str, Any]) -> dict[str, EventSums]:
+    """What is counted of all series with gaps, by its key."""
+    return {key(name): GapSums(term) for name, term in gaps.items()} | masks.sums(gaps)
+
+
+def join(plan: Any, events: dict[str, Any], first_step: int, lanes: dict[str, Any]) -> None:
+    """Compare what is missing in the newest tile of all series."""
+    seen = {name: lanes[key(name)].seen for name in plan.gaps}
+    masks.join(plan.gaps, events, seen, first_step, lanes)
+
+
 def checks(gather: Any, series: str) -> Iterator[Check]:
-    """How many values are missing, and how many in a row; what is not judged because of that."""
+    """How many values are missing, how many in a row, and whether together; what is not judged because of that."""
     if series not in gather.plan.gaps:
         return
     yield from gather.events[key(series)].checks(series)
+    yield from masks.checks(gather.plan.gaps, gather.events, series)
     note = f"{_WHY}: not judged, because hardly a path has a value at every step of a window"
     yield Check(series, "averages over steps", "all steps", "memory", outcome="reported", note=note)
 

@@ -19,7 +19,7 @@ from procgen.checks.verdict import Check
 from procgen.terms.base import Unknown
 from procgen.terms.ranks import Ranking, ranking
 
-_FEW = 25.0  # variance of a number of events, at least, that is judged
+FEW = 25.0  # variance of a number of events, at least, that is judged
 _SHARES = (0.02, 0.98)  # chances of the least value between which its share is worth a check
 
 
@@ -76,8 +76,12 @@ class EventSums:
         """Add a tile: for each name whether it has happened (steps, paths), and its chance (NaN: none taken)."""
         for sums, (happened, p) in zip(lane, seen, strict=True):
             asked, v = np.where(np.isnan(p), np.nan, 1.0), p * (1.0 - p)
-            for total, rows in zip(sums, (asked, asked * happened, p, v, v * (1.0 - 2.0 * p)), strict=True):
-                add_products(total, rows, None, first_step)
+            self.add((asked, asked * happened, p, v, v * (1.0 - 2.0 * p)), first_step, sums)
+
+    def add(self, rows: Sequence[NDArray], first_step: int, sums: NDArray) -> None:
+        """Add the five rows of one event, (steps, paths) each."""
+        for total, row in zip(sums, rows, strict=True):
+            add_products(total, row, None, first_step)
 
     def finish(self, lane: NDArray) -> None:
         """Close a range of paths."""
@@ -90,7 +94,7 @@ class EventSums:
         """The share of each event, where enough of them can be expected."""
         for name, (n, count, mean, variance, third) in zip(self.names, self.sums.tolist(), strict=True):
             what, kind = f"share: {name}", "memory" if " after " in name else "level"
-            if variance < _FEW:
+            if variance < FEW:
                 if n:
                     note = f"{mean:.3g} of {n:.0f} are expected, too few to be judged by their number"
                     yield Check(series, what, "all steps", kind, mean / n, count / n, outcome="reported", note=note)

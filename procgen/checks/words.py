@@ -53,7 +53,7 @@ _CORRELATIONS = {
 }  # how checks end whose estimate is a correlation as long as spreads are as stated -> what it is in any case
 _DRAWN = ": distribution function"  # how the check of a drawn parameter ends
 FARTHEST, FARTHEST_SHOCK = "farthest value", "shocks: farthest"
-_STAYS = re.compile(r"share: (.+) after \1, (up to \d+ steps|longer)")
+_STAYS = re.compile(r"share: (.+) after \1, (up to \d+ steps?|longer)")
 GAP, TOGETHER = " of the gap", " of the sum"  # how the checks of a combination of series end, as `relations` has them
 _LEAST_P = math.log(1e-300)  # below this a p is only said to be smaller
 
@@ -109,8 +109,8 @@ def is_signed(row: Check) -> bool:
 def name_of(row: Check) -> str:
     """What a check compares, for a reader: a correlation goes by that name only where it can be one."""
     if row.what.startswith("share: "):
-        event = row.what.removeprefix("share: ")
-        return _SHARES.get(event, f"share of {event}")
+        event, *which = row.what.removeprefix("share: ").split(", ")
+        return ", ".join([_SHARES.get(event, f"share of {event}"), *which])
     if row.estimate is not None and abs(row.estimate) > 1.0:
         for end, other in _CORRELATIONS.items():
             if row.what.endswith(end):

@@ -98,13 +98,14 @@ class Seen:
 
     @property
     def _limits(self) -> list[float]:
-        """Whole steps of the mean stay in each state."""
-        return [max(1.0, float(np.floor(mean))) for mean in self.chain.stays]
+        """Whole steps of half the mean stay in each state: stays that all have the mean length end in time by it."""
+        return [max(1.0, float(np.floor(mean / 2.0))) for mean in self.chain.stays]
 
     @property
     def watched(self) -> tuple[str, ...]:
         ends = zip(self.chain.names, self._limits, strict=True)
-        return tuple(f"{n} after {n}{what}" for n, end in ends for what in (f", up to {end:g} steps", ", longer"))
+        said = [(n, f"up to {end:g} step{'' if end == 1 else 's'}") for n, end in ends]
+        return tuple(f"{n} after {n}, {what}" for n, upto in said for what in (upto, "longer"))
 
     def events(self, values: Array, cell: Any, known: Sequence[Array | None], state: State | None, at: Array) -> Any:
         found, out = self._followed(values, state), []

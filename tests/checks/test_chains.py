@@ -5,6 +5,7 @@ far beyond what a level of 1e-8 needs.
 """
 
 import numpy as np
+import pandas as pd
 import pytest
 from scipy.stats import nbinom
 
@@ -89,17 +90,27 @@ def test_stays_of_another_law_are_found_by_their_length(paths, steps):
     """Two stages drawn as one: short stays end too often, long ones too seldom, their mean being the same."""
     found = verdict(chain(1), chain(2), paths, steps)
     rows = {row.what: row for row in found.rows if row.what.startswith("share: ")}
-    early, late = rows["share: up after up, up to 12 steps"], rows["share: up after up, longer"]
+    early, late = rows["share: up after up, up to 6 steps"], rows["share: up after up, longer"]
     assert early.outcome == late.outcome == "departs", found.to_text()
     assert early.estimate < early.theory and late.estimate > late.theory
     assert found.headline[0].startswith("x: memory: ")
+
+
+def test_stays_that_all_have_the_mean_length_are_found():
+    """They go on as often as stated over all steps up to their mean; half of it tells them."""
+    rng = np.random.default_rng(8)
+    x = np.stack([np.tile(np.repeat([0, 1], [12, 6]), 25)[at : at + 300] for at in rng.integers(0, 18, 200)])
+    paths, steps = np.indices(x.shape).reshape(2, -1)
+    table = pd.DataFrame({"path": paths, "step": steps, "x": x.ravel()})
+    found = pg.validate(table, spec(chain(1), 200, 300), false_alarm=FALSE_ALARM)
+    assert found.headline[0].startswith("x: memory: lengths of stays are not as stated"), found.to_text()
 
 
 def test_the_revealed_state_of_regimes_is_judged_so():
     drawn = pg.render(spec(regimes(1), 200, 300), reveal="all")
     found = pg.validate(drawn, spec(regimes(2), 200, 300), false_alarm=FALSE_ALARM)
     gone = {(row.series, row.what) for row in found.rows if row.outcome == "departs"}
-    assert ("x.regimes.regime", "share: down after down, up to 6 steps") in gone, found.to_text()
+    assert ("x.regimes.regime", "share: down after down, up to 3 steps") in gone, found.to_text()
     true = pg.validate(pg.render(spec(regimes(2), 100, 300), reveal="all"), false_alarm=FALSE_ALARM)
     assert true.agrees is not False
     assert ("x.regimes.regime", "share: up after up, longer") in {
