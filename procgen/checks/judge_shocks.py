@@ -9,7 +9,7 @@ from collections.abc import Iterator
 import numpy as np
 from numpy.typing import NDArray
 
-from procgen.checks import judge, tails
+from procgen.checks import apart, judge, tails
 from procgen.checks.judge import Finding
 from procgen.checks.saddle import REACH, sum_finding
 from procgen.checks.scores import Scores, largest_gap
@@ -225,12 +225,15 @@ def chi_square_logs(q: NDArray, dof: NDArray) -> tuple[NDArray, NDArray]:
 
 def _between_paths(series: str, sums: ShockSums) -> Iterator[Check]:
     number, *squares = sums.paths[:3]
+    pooled: dict[str, float] = {}
     if number >= 2:
         # Seen against the mean of all paths, so that a level or spread that is wrong everywhere is not told here too.
         level, spread = squares - sums.paths[3:] ** 2 / number
         for what, kind, q in (("level", "memory", level), ("spread", "clustering", spread)):
             finding = judge.squares(float(q), int(number) - 1, sums.n)
+            pooled[what] = finding.log_p
             yield Check.of(series, f"shocks: {what} by path", "sum over paths", kind, finding)
+        yield from apart.checks(series, sums.ends, sums.paths, pooled)
     pairs = sum((width - 1) * steps for width, steps in sums.rows.items())
     if pairs:
         finding = _lag_finding(sums.rows, 1, pairs, sums.neighbours)

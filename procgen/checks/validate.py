@@ -213,10 +213,9 @@ def judged(gather: Gather) -> Iterator[Check]:
         yield Check("", "pairs of series", "", "dependence", outcome="reported", note=note)
     for pair, sums in gather.cross.items():
         name, stated = " ~ ".join(pair), plan.shock_pairs[pair]
-        if stated.unknown:
-            yield Check(
-                name, "shocks: correlation between series", "", "dependence", outcome="untestable", note=stated.unknown
-            )
+        stopped = "; ".join(f"{one}: {gather.stopped[one]}" for one in pair if one in gather.stopped)
+        if why := stated.unknown or stopped:
+            yield Check(name, "shocks: correlation between series", "", "dependence", outcome="untestable", note=why)
         elif stated.tie is not None:
             yield from tied_checks(name, sums, stated)
         else:

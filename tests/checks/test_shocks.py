@@ -11,6 +11,7 @@ from procgen.chance.laws import LAWS
 from procgen.checks.judge_shocks import cross_checks, shock_checks
 from procgen.checks.scores import BINS, Scores, bin_counts
 from procgen.checks.shocks import CrossSums, ShockLane, ShockSums
+from tests.studies.departures import draw, spec_of, verdict
 
 NORMAL, STUDENT = LAWS["normal"](), LAWS["student_t"](df=6)
 SCORES = {law: Scores(law) for law in (NORMAL, STUDENT)}
@@ -128,3 +129,17 @@ def test_correlation_between_series_is_calibrated_and_found():
         assert stats.binom.ppf(5e-9, 400, 0.05) <= count <= stats.binom.isf(5e-9, 400, 0.05)
     wrong = {c.probe: c for c in cross_checks("x ~ y", sums, {0: -0.4})}
     assert wrong["same step"].log_p < math.log(1e-12)
+
+
+def test_a_pair_with_shocks_that_cannot_be_recovered_is_not_judged():
+    """A price that falls to the grain of its decimals: what was recovered before is no sample of its shocks."""
+    stated = {
+        "series": {
+            "a": [{"random_walk": {"sd": 1}}],
+            "b": {"decimals": 2, "of": [{"exp": [{"random_walk": {"sd": 0.02, "start": 3}}]}]},
+        }
+    }
+    values = draw(spec_of(stated, 1, 2000, 1))
+    values["b"][0, 1500:] = 0.0
+    rows = [row for row in verdict(stated, values).rows if row.what == "shocks: correlation between series"]
+    assert [row.outcome for row in rows] == ["untestable"] and "not above 0" in rows[0].note
