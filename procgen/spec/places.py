@@ -29,7 +29,12 @@ Way = Callable[[Tree, Steps], Tree]
 
 
 class Nowhere(LookupError):
-    """A place that is not there: the message says what is, and the nearest."""
+    """A place that is not there: the message says what is, and the nearest.
+
+    `lost`, where a name was not found: the path up to it, the name, those that are there, and the steps behind it.
+    """
+
+    lost: tuple[str, Step, Sequence[str], Steps] | None = None
 
 
 def steps_of(place: str) -> tuple[Step, ...]:
@@ -82,7 +87,7 @@ def put(tree: Tree, place: str, new: Tree, declared: Declared) -> tuple[Tree, st
     try:
         return writer.spec(tree, steps_of(place)), writer.path
     except Nowhere as error:
-        raise Nowhere(f"there is no place {place[:200]} in this spec; {writer.hint(tree, place, str(error))}") from None
+        raise Nowhere(f"there is no place {place[:200]} in this spec; {writer.hint(tree, place, error)}") from None
 
 
 @dataclass(frozen=True)
@@ -108,23 +113,46 @@ class _Writer:
         ways["time"] = lambda t, s: self._key(t, s, lambda name: self._plain, self.declared.time)
         return self._key(tree, steps, lambda name: ways.get(name, self._plain), self.declared.sections)
 
-    def hint(self, tree: Tree, place: str, otherwise: str) -> str:
+    def hint(self, tree: Tree, place: str, error: Nowhere) -> str:
         """Return what may have been meant by a place that is not there."""
-        steps = steps_of(place)
+        steps, otherwise = steps_of(place), str(error)
         groups = tree.value.get("groups") if tree.is_map else None
         if steps[0] == "series" and len(steps) > 1 and groups is not None and groups.is_map:
             name = next((name for name, group in groups.value.items() if _has_member(group, steps[1])), None)
             if name is not None:
                 instead = _joined("groups", (name, *steps[2:]))
                 return f"{steps[1]} is one of the group {name}, whose series are written once; set {instead} for all"
-        for section in (*_BODIES, "time"):
-            other = _Writer(self.new, self.declared)
-            try:
-                other.spec(tree, steps_of(f"{section}.{place}"))
-            except Nowhere:
-                continue
-            return f"did you mean {section}.{place}?"
+        moved = [_joined(section, steps) for section in (*_BODIES, "time")]
+        moved += [_joined(section, steps[1:]) for section in _BODIES if steps[0] in _BODIES and len(steps) > 2]
+        meant = next((other for other in [*moved, *self._fitting(error)] if self._is_place(tree, other)), None)
+        if meant is not None:
+            return f"did you mean {meant}?"
+        if len(steps) == 2 and steps[0] in _BODIES and self.new.value is not OUT and "did you mean" not in otherwise:
+            what = {"series": "series", "groups": "group", "shared": "shared body"}[str(steps[0])]
+            return (
+                f"{otherwise}; a setting changes what is there and adds no {what}: write {steps[1]} in the spec, and "
+                "take it out (null) where it is not wanted"
+            )
         return otherwise
+
+    def _fitting(self, error: Nowhere) -> Iterator[str]:
+        """Yield places like the one that was lost: with the nearest name, without the name, with another one."""
+        if error.lost is None or not error.lost[3]:
+            return
+        path, name, there, rest = error.lost
+        near = nearest(name, there)
+        if near is not None:
+            yield _joined(path, (near, *rest))
+        if path:
+            yield _joined(path, rest)
+            yield from (_joined(path, (other, *rest)) for other in there)
+
+    def _is_place(self, tree: Tree, place: str) -> bool:
+        try:
+            _Writer(self.new, self.declared).spec(tree, steps_of(place))
+        except Nowhere:
+            return False
+        return True
 
     # one step of the way
 
@@ -155,16 +183,22 @@ class _Writer:
             raise Nowhere(f"{tree.place.path} has {len(tree.value)}, counted from [0]")
         path = f"{tree.place.path}[{i}]"
         made = way(tree.value[i], rest) if rest else self._new(path)
-        return Tree((*tree.value[:i], made, *tree.value[i + 1 :]), tree.place)
+        here = tree.place
+        if way == self._plain and all(isinstance(step, int) for step in rest):  # a list of numbers that is now another
+            here = replace(made.place, path=here.path)
+        return Tree((*tree.value[:i], made, *tree.value[i + 1 :]), here)
 
     def _nowhere(self, path: str, name: Step, there: Sequence[str], rest: Steps) -> Nowhere:
-        near = nearest(name, there)
+        near = None if rest else nearest(name, there)
         where = path or "a spec"
+        said = f"{where} has {one_of(there[:20])}{', …' if len(there) > 20 else ''}"
         if near is not None:
-            return Nowhere(f"did you mean {_joined(path, (near, *rest))}?")
-        if not there:
-            return Nowhere(f"{where} is a value without places in it")
-        return Nowhere(f"{where} has {one_of(there[:20])}{', …' if len(there) > 20 else ''}")
+            said = f"did you mean {_joined(path, (near,))}?"
+        elif not there:
+            said = f"{where} is a value without places in it"
+        error = Nowhere(said)
+        error.lost = (path, name, there, rest)
+        return error
 
     def _plain(self, tree: Tree, steps: Steps) -> Tree:
         if isinstance(steps[0], int):

@@ -159,8 +159,18 @@ FAULTY = {
     "steps: 9": "there is no place steps in this spec; did you mean time.steps?",
     "series.load.swing.phi[2]: 9": "there is no place series.load.swing.phi[2] in this spec; series.load[3].arma.phi "
     "has 2, counted from [0]",
-    "series.load.swing.zeta.q: 1": "there is no place series.load.swing.zeta.q in this spec; did you mean "
-    "series.load[3].arma.theta.q?",
+    "series.load.swing.zeta.q: 1": "there is no place series.load.swing.zeta.q in this spec; series.load[3].arma has "
+    "one of phi, theta, shock, sd, total_sd, law, before",
+    "series.load.nope.phi: 1": "there is no place series.load.nope.phi in this spec; did you mean "
+    "series.load.swing.phi?",
+    "series.shops.white_noise.sd: 1": "there is no place series.shops.white_noise.sd in this spec; did you mean "
+    "groups.shops.white_noise.sd?",
+    "groups.shops.a.white_noise.sd: 1": "there is no place groups.shops.a.white_noise.sd in this spec; did you mean "
+    "groups.shops.white_noise.sd?",
+    "series.third: [{white_noise: {sd: 1}}]": "there is no place series.third in this spec; series has one of load, "
+    "price, mode; a setting changes what is there and adds no series: write third in the spec, and take it out (null) "
+    "where it is not wanted",
+    "series.load.swing.phi[1]: 0.4": None,
     "reuse: 1": "there is no place reuse in this spec; a spec has one of procgen, seed, paths, time, shared, series, "
     "groups, correlation, title, parameters",
     "series.price.random_walk.sd: -1": "expected a number above 0, got -1 (sd: standard deviation of the shock)",
