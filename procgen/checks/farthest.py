@@ -75,7 +75,7 @@ def checks(
     if not known:
         return
     room = 10.0 * math.sqrt(noise) if noise or ranks or scores.gaussian else scores.room
-    logs = [_of_n(_log_tail(scores, far, room), n) for far in known]
+    logs = [judge.of_many(math.log(2.0) + _log_tail(scores, far, room), n) for far in known]
     best = int(np.argmin(logs))
     first, log_p = known[best], logs[best]
     outside = [far for far, log in zip(known, logs, strict=True) if log < _OUTSIDE]
@@ -109,15 +109,6 @@ def _log_tail(scores: Scores, far: Far, room: float) -> float:
     side = scores.folded(np.array([z]))
     inwards = side + room if side[0] < scores.median else side - room
     return max(float(log_ndtr(-abs(scores.normal_scores(inwards)[0]))), math.log(_CLIPPED))
-
-
-def _of_n(log_tail: float, n: int) -> float:
-    """Logarithm of 1 − (1 − 2a)^n."""
-    log_two = math.log(2.0) + log_tail
-    if log_two < -30.0:
-        return min(0.0, log_two + math.log(n))
-    a = math.exp(log_two)
-    return math.log(-math.expm1(n * math.log1p(-a))) if a < 1.0 else 0.0
 
 
 def _score(log_tail: float) -> float:

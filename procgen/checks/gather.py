@@ -184,7 +184,7 @@ class Gather:
         facts["moments"] = self.moments.n
         facts["powers"] = [powers.paths for powers in self._powers()]
         facts["shocks"] = [
-            [s.n, s.neighbours, s.outside, s.far, list(s.chains.items()), list(s.rows.items())]
+            [s.n, s.neighbours, s.outside, s.far, s.ends, list(s.chains.items()), list(s.rows.items())]
             for s in self.shocks.values()
         ]
         kept = {"kept": self.kept.rows, "numbers": _joined(self._arrays(float)), "counts": _joined(self._arrays(int))}
@@ -200,8 +200,8 @@ class Gather:
         self.moments.n = facts["moments"]
         for powers, paths in zip(self._powers(), facts["powers"], strict=True):
             powers.paths = paths
-        for s, (n, neighbours, outside, far, chains, rows) in zip(self.shocks.values(), facts["shocks"], strict=True):
-            s.n, s.neighbours, s.outside, s.far = n, neighbours, outside, far
+        for s, known in zip(self.shocks.values(), facts["shocks"], strict=True):
+            s.n, s.neighbours, s.outside, s.far, s.ends, chains, rows = known
             s.chains, s.rows = Counter(dict(chains)), Counter(dict(rows))
         self.kept.rows = arrays["kept"]
         for kind, name in ((float, "numbers"), (int, "counts")):

@@ -272,10 +272,14 @@ def reach_of_worst(level: float, n: int) -> float:
 
 def worst(log_ps: NDArray) -> float:
     """log p of the smallest of independent exact p-values (Sidak 1967)."""
-    low = float(np.min(log_ps))
-    if low > -30:
-        return math.log(-math.expm1(log_ps.size * math.log1p(-math.exp(low)))) if low < 0 else 0.0
-    return min(0.0, low + math.log(log_ps.size))
+    return of_many(float(np.min(log_ps)), log_ps.size)
+
+
+def of_many(log_p: float, n: int) -> float:
+    """log of 1 − (1 − p)^n: of the smallest of n independent exact p-values, where log p is its logarithm."""
+    if log_p > -30:
+        return math.log(-math.expm1(n * math.log1p(-math.exp(log_p)))) if log_p < 0 else 0.0
+    return min(0.0, log_p + math.log(n))
 
 
 def anderson_darling(u: NDArray) -> Finding:

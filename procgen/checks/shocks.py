@@ -13,7 +13,7 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
-from procgen.checks import farthest
+from procgen.checks import apart, farthest
 from procgen.checks.blocks import GROUP, Window, across, add_lagged, add_products, compiled, scratch
 from procgen.checks.scores import BINS, Scores, cluster_scores
 from procgen.checks.stretches import LENGTHS, StretchLane, StretchSums
@@ -22,7 +22,7 @@ from procgen.checks.uniforms import bin_counts, uniforms
 MEMORY_LAGS = (1, 2, 3, 4, 5, 6, 8, 12)
 CLUSTER_LAGS = (1, 2, 3, 5)
 PROFILE = 65_536  # longest profile over steps; longer series share its entries
-_SINGLE = 6  # sums by path that have no lag: of g, g², z, z², asymmetry, neighbours
+FIRST_LAG = 6  # before it are the sums by path that have no lag: of g, g², z, z², asymmetry, neighbours
 
 
 class ShockLane:
@@ -34,7 +34,7 @@ class ShockLane:
     def __init__(self, paths: int, lags: Sequence[int] = MEMORY_LAGS, first_path: int = 0):
         self.first_path = first_path
         self.scores, self.clusters = Window(max(lags), paths), Window(max(CLUSTER_LAGS), paths)
-        self.totals = np.zeros((_SINGLE + len(lags) + len(CLUSTER_LAGS), paths))
+        self.totals = np.zeros((FIRST_LAG + len(lags) + len(CLUSTER_LAGS), paths))
         self.beside = np.zeros(max(paths - 1, 0))  # products with the left neighbour
         self.length = np.zeros(paths, dtype=np.int64)
         self.view = np.empty((0, paths))
@@ -75,6 +75,7 @@ class ShockSums:
     paths: NDArray = field(default_factory=lambda: np.zeros(5))  # number, sums of level², spread², level, spread
     outside: int = 0  # shocks where the law has none
     far: list[farthest.Far] = field(default_factory=list)  # the shocks farthest out
+    ends: apart.Ends = field(default_factory=dict)  # the paths farthest from the others
 
     def __post_init__(self) -> None:
         self.width = -(-self.steps // PROFILE)
@@ -155,7 +156,7 @@ class ShockSums:
     def _along(self, g: NDArray, clusters: NDArray, lane: ShockLane, offset: int) -> None:
         """Products with earlier steps of the same path."""
         lane.view, squares = lane.scores.push(g), lane.clusters.push(clusters)
-        rows = lane.totals[_SINGLE:]
+        rows = lane.totals[FIRST_LAG:]
         for i, lag in enumerate(self.lags):
             self.memory[0, i] += add_lagged(rows[i], lane.view, lane.view, lag, len(g), offset)
         for i, lag in enumerate(CLUSTER_LAGS):
@@ -184,8 +185,6 @@ class ShockSums:
 
     def finish(self, lane: ShockLane) -> None:
         """Close a range of paths whose last step has been absorbed."""
-        from scipy.special import chdtr, ndtri
-
         lane.totals[5, 1:] = lane.beside
         lane.totals[5, ::GROUP] = 0.0  # whose left neighbour is of another lane group
         totals = across(lane.totals)
@@ -194,13 +193,15 @@ class ShockSums:
         self.stretches.finish(lane.stretches)
         self.asymmetry[1] += totals[4]
         self.neighbours += float(totals[5])
-        self.memory[1] += totals[_SINGLE : _SINGLE + len(self.lags)]
-        self.cluster[1] += totals[_SINGLE + len(self.lags) :]
+        self.memory[1] += totals[FIRST_LAG : FIRST_LAG + len(self.lags)]
+        self.cluster[1] += totals[FIRST_LAG + len(self.lags) :]
         some = lane.length > 0
         n = np.maximum(lane.length, 1)
         level = np.where(some, lane.totals[0] / np.sqrt(n), 0.0)
-        spread = np.where(some, ndtri(np.clip(chdtr(n, lane.totals[1]), 1e-300, 1 - 1e-16)), 0.0)
+        spread = np.where(some, apart.spreads(lane.totals[1], n), 0.0)
         self.paths += across(np.array([some.astype(float), level * level, spread * spread, level, spread]))
+        slope = np.where(some, lane.totals[FIRST_LAG] / np.where(some, lane.totals[1], 1.0), 0.0) * np.sqrt(n + 2.0)
+        self.ends = apart.merged(self.ends, apart.ends_of(level, spread, slope, lane.length, lane.first_path))
         lengths, paths = np.unique(lane.length[some], return_counts=True)
         self.chains.update(dict(zip(lengths.tolist(), paths.tolist(), strict=True)))
 
@@ -210,6 +211,7 @@ class ShockSums:
         self.neighbours += other.neighbours
         self.outside += other.outside
         self.far = farthest.merged([*self.far, *other.far])
+        self.ends = apart.merged(self.ends, other.ends)
         self.chains.update(other.chains)
         self.rows.update(other.rows)
         for name in SHOCK_ARRAYS:

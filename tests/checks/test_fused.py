@@ -74,7 +74,7 @@ def test_sums_of_shocks(monkeypatch, law, cuts, paths, period):
                 found[f"{kind} {first}"] = (lane.view.tobytes(), lane.totals.tobytes(), lane.beside.tobytes())
             sums.finish(lane)
             found |= {f"{kind} {name}": getattr(sums, name) for name in SHOCK_ARRAYS}
-            facts = sums.n, sums.far, sums.chains, sums.rows, sums.neighbours, sums.outside
+            facts = sums.n, sums.far, sums.ends, sums.chains, sums.rows, sums.neighbours, sums.outside
             found[f"{kind} facts"] = facts
         return found
 

@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.chance.laws import LAWS
-from procgen.checks import judge, judge_shocks
+from procgen.checks import apart, judge, judge_shocks
 from procgen.checks.judge import Finding, Sample
 from procgen.checks.scores import BINS, Scores, cluster_scores
 from procgen.checks.shocks import CrossSums, ShockLane, ShockSums
@@ -341,6 +341,27 @@ def by_path(what: str, paths: int, steps: int) -> Findings:
     return findings
 
 
+def worst_path(what: str, paths: int, steps: int) -> Findings:
+    """The path farthest out in level, spread or memory; near ones are not judged."""
+    from scipy.special import ndtri
+
+    near, n = -float(ndtri(0.03 / paths)), np.full(paths, steps)
+
+    def findings(rng: Rng, count: int) -> Iterator[tuple[Finding, int]]:
+        g = rng.standard_normal((steps, count, paths))
+        square = np.einsum("tcp,tcp->cp", g, g)
+        slope = np.einsum("tcp,tcp->cp", g[1:], g[:-1]) / square * math.sqrt(steps + 2)
+        z = {"level": g.sum(axis=0) / math.sqrt(steps), "spread": apart.spreads(square, steps), "memory": slope}
+        for row in np.flatnonzero(np.abs(z[what]).max(axis=1) > (0.8 if what == "memory" else 0.9) * near):
+            level, spread, memory = (each[row] for each in z.values())
+            sums = np.array([paths, level @ level, spread @ spread, level.sum(), spread.sum()])
+            ends = apart.ends_of(level, spread, memory, n, 0)
+            rows = apart.checks("x", {what: ends[what]}, sums, {"level": 0.0, "spread": 0.0})
+            yield next(rows).finding, 1  # type: ignore[misc]
+
+    return findings
+
+
 def many_products(pairs: int) -> Findings:
     """As many products, each of two normals of its own."""
     return of_one_number(
@@ -491,6 +512,9 @@ CASES = (
     Case("shocks: level by path, 30 paths of 200 steps", 200_000, by_path("shocks: level by path", 30, 200), 300),
     Case("shocks: spread by path, 30 paths of 200 steps", 200_000, by_path("shocks: spread by path", 30, 200), 300),
     Case("shocks: spread by path, 200 paths of 20 steps", 50_000, by_path("shocks: spread by path", 200, 20), 2000),
+    Case("shocks: level of the worst of 30 paths", 200_000, worst_path("level", 30, 20), 600),
+    Case("shocks: spread of the worst of 30 paths", 200_000, worst_path("spread", 30, 20), 600),
+    Case("shocks: memory of the worst of 30 paths", 50_000, worst_path("memory", 30, 20), 600),
     Case("worst of 200 steps", 1_000_000, worst_of(200), 200),
     Case("sums of 6 squares", 10_000_000, squares(6)),
 )
