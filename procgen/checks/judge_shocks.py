@@ -177,8 +177,8 @@ def _by_step(series: str, sums: ShockSums) -> Iterator[Check]:
     upper, lower = chi_square_logs(within, count - 1)
     spread = np.where(upper < lower, -ndtri(np.exp(np.maximum(upper, -700))), ndtri(np.exp(np.maximum(lower, -700))))
     # The spread is seen against its mean over steps: one that is wrong at all steps alike is told by itself.
-    apart = float(spread @ spread) - float(spread.sum()) ** 2 / spread.size
-    for kind, z, q, dof in (("level", level, float(level @ level), 0), ("spread", spread, apart, 1)):
+    beside = float(spread @ spread) - float(spread.sum()) ** 2 / spread.size
+    for kind, z, q, dof in (("level", level, float(level @ level), 0), ("spread", spread, beside, 1)):
         finding = judge.squares(q, z.size - dof, n)
         yield Check.of(series, f"shocks: {kind} by step", "sum over steps", kind, finding)
         yield Check.of(series, f"shocks: {kind} by step", *_worst_step(sums, z, kind))

@@ -33,7 +33,6 @@ from procgen.ensemble.plan import Block
 
 _PATH = re.compile(r"\b(paths? )(\d+(?: and \d+)?)\b")
 _WORST = "worst: path "
-_WORST = "worst: path "
 _LONGEST = 1 << 14  # steps over which the end of a forgotten start is looked for
 
 Tick = Callable[[int, int], None]
