@@ -21,6 +21,7 @@ from procgen.checks.words import FARTHEST, number
 COUNTED = 32  # values of a series that are counted, the most that are kept of one value
 KEPT = COUNTED + 1  # one more shows whether there are others than these
 _LEAST = 4.0  # standard deviations, below which a value is of no interest
+_FARTHEST = 1e300  # standard deviations that are told apart
 _CHUNK = 1 << 15  # steps whose theory is asked for at once, at most
 _OUTSIDE = math.log(0.05)  # of a value that is farther than all values of N should be
 _ABSURD = 2.0  # times as far as the farthest of N should be
@@ -50,14 +51,14 @@ class Reach:
         `ends` (steps,): the least and the largest value of each step, where they are known.
         """
         mean, sd = self._at(first_step, len(x))
-        with np.errstate(invalid="ignore", divide="ignore"):
+        with np.errstate(invalid="ignore", divide="ignore", over="ignore"):
             low, high = ends or (np.fmin.reduce(x, axis=1), np.fmax.reduce(x, axis=1))
             worst = np.maximum(high - mean, mean - low) / sd
             least = max(_LEAST, known[-1][0]) if len(known) == KEPT else _LEAST
             rows = np.flatnonzero(worst >= least)
             if not rows.size:
                 return list(known)
-            sizes = np.abs(x[rows] - mean[rows, None]) / sd[rows, None]
+            sizes = np.minimum(np.abs(x[rows] - mean[rows, None]) / sd[rows, None], _FARTHEST)
         sizes[~np.isfinite(x[rows])] = 0.0
         found = list(known)
         for at, path in np.argwhere(sizes >= least).tolist():

@@ -70,7 +70,7 @@ class Lane:
             related = {}
             for column, name in enumerate(self.plan.names):
                 x = _tile(rest.get(name), values[name], at, count)
-                self._series(column, x)
+                x = self._series(column, x)
                 if any(name in relation.weights for relation in self.plan.relations):
                     related[name] = x
             for relation in self.relations:
@@ -83,7 +83,8 @@ class Lane:
         if at < steps:
             self.rest = {name: _tile(rest.get(name), values[name], at, steps - at).copy() for name in self.plan.names}
 
-    def _series(self, column: int, x: NDArray) -> None:
+    def _series(self, column: int, x: NDArray) -> NDArray:
+        """Add a tile of one series; the tile as it goes into sums."""
         plan, sums = self.plan.series[column], self.sums
         if not sums.structure.absorb(column, x, self.first_path, self.step, self.prints[column]):
             x = np.where(np.isfinite(x), x, np.nan)  # named there; from here on the path is left out
@@ -92,6 +93,10 @@ class Lane:
         if self.plan.precision[column].possible.every > 1:
             sums.structure.hold(column, x, self.held.get(column), self.first_path, self.step)
             self.held[column] = x[-1:].copy()
+        if not self.plan.precision[column].random:
+            self._compare(plan, x)
+        if not (x.max() <= plan.limit and x.min() >= -plan.limit):
+            x = np.clip(x, -plan.limit, plan.limit)
         for i in np.flatnonzero((plan.steps >= self.step) & (plan.steps < self.step + len(x))):
             self.probes[:, self.plan.offset[column] + i] = x[plan.steps[i] - self.step]
         if plan.name in self.plan.gaps:
@@ -103,8 +108,6 @@ class Lane:
             pool.absorb(x, self.step)
         if plan.name in sums.squares:
             sums.squares[plan.name].absorb(x, self.step, self.squares[plan.name])
-        if not self.plan.precision[column].random:
-            self._compare(plan, x)
         route = sums.routes.get(plan.name)
         if route is not None:
             z, self.carriers[plan.name] = route.tile(x, self.carriers[plan.name], self.first_path, self.step)
@@ -116,6 +119,7 @@ class Lane:
                 sums.shocks[plan.name].absorb(z, self.step, self.shocks[plan.name], x)
             else:
                 sums.errors[plan.name].absorb(z, self.errors[plan.name])
+        return x
 
     def _compare(self, plan: SeriesPlan, x: NDArray) -> None:
         """A series without chance is its mean, exactly (but for rounding)."""

@@ -21,6 +21,7 @@ from procgen.checks.scores import Scores
 from procgen.theory.mixedlaw import Normal
 
 PAIR_LIMIT = 36  # pairs of series that are compared
+_HUGE = 1e9  # times the size of a series
 _RARE = 9.0  # the kurtosis, that of the exponential law, beyond which a few rare values make most of the spread
 
 
@@ -73,6 +74,16 @@ class SeriesPlan:
 
     def reason(self, name: str) -> str:
         return self.theory.reason(name) or "theory has no closed form"
+
+    @cached_property
+    def limit(self) -> float:
+        """How large values are let into the sums: their powers would overflow. What is farther out is named by itself.
+
+        A billion times what the series has, so that no true value is cut; infinite where that is not known.
+        """
+        sizes = np.abs(self.mean), np.sqrt(np.maximum(self.variance, 0.0))
+        size = sum(float(np.max(each)) for each in sizes)
+        return _HUGE * (size or 1.0) if math.isfinite(size) else math.inf
 
     @property
     def constant(self) -> NDArray[np.bool_]:

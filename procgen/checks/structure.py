@@ -58,8 +58,8 @@ class Structure:
         if wrong is not None and wrong.any():
             _note(self.not_finite, what.name, wrong, first_path, first_step)
         if what.decimals is not None and abs(what.decimals) <= 15:
-            scaled = x * 10.0**what.decimals
-            with np.errstate(invalid="ignore"):
+            with np.errstate(over="ignore", invalid="ignore"):
+                scaled = x * 10.0**what.decimals
                 off = np.abs(scaled - np.rint(scaled)) > 1e-9 + _SPACING.get(what.type, 4e-16) * np.abs(scaled)
             if off.any():
                 _note(self.off_grid, what.name, off, first_path, first_step)

@@ -12,6 +12,8 @@ from numpy.typing import ArrayLike, NDArray
 
 _LOG2 = math.log(2.0)
 SAFE = 1.6
+_FAR = 1e4  # standard deviations
+_RANKS = -1e4  # logarithm of a tail, below which it only ranks: Chernoff's bound is enough
 
 
 def two_sided(log_upper: float, log_lower: float) -> float:
@@ -86,8 +88,9 @@ def lift(z: float, excess: float) -> float:
     z = abs(z)
     if excess <= 0.0 or z * z <= 3.0:
         return 0.0
-    hazard = math.exp(-0.5 * z * z - 0.9189385332046727 - float(log_ndtr(-z)))
-    return excess / 24 * (z**3 - 3 * z) * hazard
+    # Mills' ratio is 1/z far out, where the difference of two large logarithms would lose it
+    hazard = math.exp(-0.5 * z * z - 0.9189385332046727 - float(log_ndtr(-z))) if z < _FAR else z
+    return excess / 24 * (z * z - 3) * z * hazard
 
 
 def self_normalised(x: float, skew: float, n: int) -> tuple[float, float]:
@@ -163,6 +166,8 @@ def _contour(x: float, w: NDArray, d: NDArray, s0: float, s_max: float) -> float
     scale = s_max if x > 0 else max(s0, 0.5 / float(np.abs(w).max()))
     bend = math.copysign(1 / (4 * scale), x)
     base = -0.5 * float(np.sum(d * np.log1p(-2 * w * s0))) - s0 * x
+    if base < _RANKS:
+        return base
     total, start, chunk = 0.0, 0, 128
     while start < 400_000:
         v = step * np.arange(start, start + chunk)

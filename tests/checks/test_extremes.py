@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 from scipy import stats
 
+from procgen.checks import tails
 from procgen.checks.extremes import KEPT, Reach, checks, merged
 from procgen.checks.structure import Structure
 from procgen.checks.words import name_of
@@ -144,3 +145,37 @@ def test_many_values_that_differ_are_not_taken_for_a_mark():
     verdict_of_all = verdict(AR, values)
     assert verdict_of_all.agrees is False
     assert "as if it marked" not in "".join(row.note for row in verdict_of_all.rows)
+
+
+BODIES = {
+    "ar": AR,
+    "seasonal": [{"seasonal": {"period": 24, "harmonics": [{"amplitude": 3}]}}, {"ar": {"phi": 0.7, "sd": 2}}],
+    "garch": [{"garch": {"sd": 1.5, "alpha": 0.1, "beta": 0.8}}],
+    "counts": [{"poisson": {"mean": 6}}],
+    "walk": [{"random_walk": {"sd": 1}}],
+    "two": [{"ar": {"phi": 0.7, "sd": 2}}, {"white_noise": {"sd": 1}}],
+    "no chance": [{"seasonal": {"period": 24, "harmonics": [{"amplitude": 3}]}}],
+    "decimals": {"procgen": 1, "paths": 60, "time": {"steps": 80}, "series": {"x": {"decimals": 2, "of": AR}}},
+}
+
+
+@pytest.mark.filterwarnings("error")
+@pytest.mark.parametrize("body", BODIES.values(), ids=BODIES)
+def test_one_value_of_any_size_is_named(body):
+    # 9.96921e36 is what NetCDF fills gaps with (NC_FILL_FLOAT), 1.7e308 nearly the largest double.
+    values = draw(spec_of(body, 60, 80, 3))
+    for huge in (1e3, 1e12, 1e20, 9.96921e36, 1e60, 1e155, 1.7e308):
+        spoiled = values["x"].copy()
+        spoiled[5, 60] = huge
+        line = verdict(body, {"x": spoiled}).headline[0]
+        if body is BODIES["no chance"]:
+            assert line.startswith(f"x: level: a value is {huge:.10g}, stated ")
+        else:
+            seen = f"value {huge:.6g}".replace("-", "−")
+            assert line.startswith("x: one value far outside what the law allows: path 5, step 60, " + seen)
+
+
+def test_tail_is_lifted_by_its_limit_far_out():
+    # phi(z) / Q(z) = z + 1/z - 2/z^3 ... (Abramowitz & Stegun 26.2.12)
+    for z in (9e3, 2e4, 1e8, 1e40):
+        assert tails.lift(z, 24.0) == pytest.approx(z**4, rel=1e-6)
