@@ -20,7 +20,9 @@ from procgen.options import (
     asked,
     expected,
     one_asked,
+    share,
     steps_of,
+    whole,
     within,
 )
 
@@ -104,18 +106,18 @@ def render(
         str, typer.Option("-o", "--out", metavar="OUT", help="Folder to write, or a URL.", show_default=False)
     ],
     paths: Annotated[
-        int | None, typer.Option(metavar="N", help="Number of paths, instead of the spec's.", min=1)
+        int | None, typer.Option(parser=whole(1), metavar="N", help="Number of paths, instead of the spec's.")
     ] = None,
-    first_path: Annotated[int, typer.Option(metavar="N", help="Number of the first path.", min=0)] = 0,
+    first_path: Annotated[int, typer.Option(parser=whole(0), metavar="N", help="Number of the first path.")] = 0,
     steps: Annotated[
-        int | None, typer.Option(metavar="N", help="Number of steps, instead of the spec's.", min=1)
+        int | None, typer.Option(parser=whole(1), metavar="N", help="Number of steps, instead of the spec's.")
     ] = None,
-    seed: Annotated[int | None, typer.Option(metavar="N", help="Seed, instead of the spec's.", min=0)] = None,
+    seed: Annotated[int | None, typer.Option(parser=whole(0), metavar="N", help="Seed, instead of the spec's.")] = None,
     start: Start = None,
     variant: VariantOrAll = None,
     setting: Settings = None,
     workers: Annotated[
-        int | None, typer.Option(metavar="N", help="Processes; what the size repays when absent.", min=1)
+        int | None, typer.Option(parser=whole(1), metavar="N", help="Processes; what the size repays when absent.")
     ] = None,
     layout: Annotated[
         str,
@@ -207,10 +209,10 @@ def validate(
     ] = None,
     value_col: Annotated[str | None, typer.Option(metavar="NAME", help="Column of DATA with that value.")] = None,
     false_alarm: Annotated[
-        float, typer.Option(metavar="P", help="Chance of a false alarm over all checks.", min=1e-12, max=0.5)
+        float, typer.Option(parser=share(1e-12, 0.5), metavar="P", help="Chance of a false alarm over all checks.")
     ] = 0.001,
     workers: Annotated[
-        int | None, typer.Option(metavar="N", help="Processes; what the size repays when absent.", min=1)
+        int | None, typer.Option(parser=whole(1), metavar="N", help="Processes; what the size repays when absent.")
     ] = None,
     scheduler: Scheduler = None,
     json: Json = False,
@@ -295,7 +297,7 @@ def theory(
         typer.Option(parser=steps_of, metavar="0,1,10", help="Steps at which to give mean and variance."),
     ] = None,
     lags: Annotated[
-        int, typer.Option(metavar="N", help="Largest lag of the autocovariances.", min=0, max=100_000)
+        int, typer.Option(parser=whole(0, 100_000), metavar="N", help="Largest lag of the autocovariances.")
     ] = 40,
     frequencies: Annotated[
         tuple | None,

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Iterable, Mapping
+from collections.abc import Callable, Iterable, Mapping
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated
 
@@ -45,6 +45,35 @@ Expect = Annotated[
         help="The digest it should have, or an old manifest.json (or its folder), which also tells what moved.",
     ),
 ]
+
+
+def whole(least: int, most: int | None = None) -> Callable[[str], int]:
+    """A reader of whole numbers from `least` on, up to `most` where there is one."""
+    span = f"of at least {least}" if most is None else f"from {least} to {most:,}"
+
+    def read(text: str | int) -> int:
+        digits = str(text).strip()
+        number = int(digits) if digits.removeprefix("-").isdecimal() and len(digits) <= 400 else None
+        if number is None or number < least or (most is not None and number > most):
+            raise typer.BadParameter(f"expected a whole number {span}, in digits, got {text!r}")
+        return number
+
+    return read
+
+
+def share(least: float, most: float) -> Callable[[str], float]:
+    """A reader of numbers between two."""
+
+    def read(text: str | float) -> float:
+        try:
+            number = float(text)
+        except ValueError:
+            number = float("nan")
+        if not least <= number <= most:
+            raise typer.BadParameter(f"expected a number from {least:g} to {most:g}, got {text!r}")
+        return number
+
+    return read
 
 
 PLACES = {"paths": "paths", "steps": "time.steps", "seed": "seed"}  # options of their own, and where they stand

@@ -64,6 +64,21 @@ def test_help_names_every_command_and_shows_an_example_of_each():
         assert page == Result(name, "-h").out
 
 
+@pytest.mark.parametrize(
+    ("arguments", "said"),
+    [
+        (("render", "--paths", "1e3"), "'--paths': expected a whole number of at least 1, in digits, got '1e3'"),
+        (("render", "--workers", "0"), "'--workers': expected a whole number of at least 1, in digits, got '0'"),
+        (("theory", "--lags", "100001"), "expected a whole number from 0 to 100,000, in digits, got '100001'"),
+        (("validate", "--false-alarm", "1"), "'--false-alarm': expected a number from 1e-12 to 0.5, got '1'"),
+    ],
+)
+def test_a_number_out_of_bounds_is_told_as_it_was_given(arguments, said):
+    name, *rest = arguments
+    result = CliRunner().invoke(app, [name, "x.yaml", *(("-o", "y") if name == "render" else ()), *rest])
+    assert result.exit_code == 2 and said in " ".join(result.output.split())
+
+
 def test_the_options_are_those_that_were_promised():
     promised = {
         "render": "-o --paths --first-path --steps --seed --workers --layout --reveal --resume --overwrite --scheduler "
