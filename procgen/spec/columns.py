@@ -17,7 +17,7 @@ import numpy as np
 
 from procgen.spec.declare import INVALID, Domain, Parameter, Reals, Schema, Text, Whole, mapping_of, read_each
 from procgen.spec.domains import Reading
-from procgen.spec.tables import MOST_VALUES, Columns, has_numbers, read_file
+from procgen.spec.tables import MOST_VALUES, Columns, has_numbers, other_separator, read_file
 from procgen.spec.tree import Tree
 from procgen.spec.units import parse_date
 from procgen.spec.words import did_you_mean, one_of
@@ -244,7 +244,7 @@ def has_column(table: Columns, name: str, tree: Tree, reader: Reading) -> bool:
     if name in table:
         return True
     message = f"the table has no column {name}; it has {one_of(table)}; {did_you_mean(name, table)}"
-    reader.fault(tree.value["file"], message.rstrip("; "))
+    reader.fault(tree.value["file"], message.rstrip("; ") + other_separator([*table]))
     return False
 
 

@@ -106,7 +106,7 @@ def _has(table: Columns, names: Sequence[str], tree: Tree, reader: Reading) -> b
     for name in names:
         if name not in table:
             message = f"the table has no column {name}; it has {one_of(table)}; {did_you_mean(name, table)}"
-            reader.fault(tree.value["file"], message.rstrip("; "))
+            reader.fault(tree.value["file"], message.rstrip("; ") + other_separator([*table]))
     return all(name in table for name in names)
 
 
@@ -161,10 +161,17 @@ def _csv(path: Path) -> Columns:
         raise ValueError("expected a line of names, and lines of values under it")
     short = next((i for i, row in enumerate(rows) if len(row) != len(rows[0])), None)
     if short is not None:
-        raise ValueError(f"line {ends[short]} has {len(rows[short])} cells, and there are {len(rows[0])} names")
+        what = f"line {ends[short]} has {len(rows[short])} cells, and there are {len(rows[0])} names"
+        raise ValueError(what + other_separator(rows[0]))
     columns = Columns({name.strip(): [_cell(row[i].strip()) for row in rows[1:]] for i, name in enumerate(rows[0])})
     columns.rows = [f"line {end}" for end in ends[1:]]
     return columns
+
+
+def other_separator(names: Sequence[str]) -> str:
+    """What is to be said of a line of names that something else than commas parts; nothing where commas do."""
+    found = [what for mark, what in ((";", "semicolons"), ("\t", "tabs")) if len(names) == 1 and mark in names[0]]
+    return f"; {found[0]} part its names: use commas, and write numbers with a decimal point" if found else ""
 
 
 def _cell(text: str) -> Any:

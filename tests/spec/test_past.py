@@ -254,6 +254,13 @@ def test_what_a_record_replaces_is_said(tmp_path):
         assert all(f"the {one} is not used: the record says where it stands" in text for one in what)
 
 
+@pytest.mark.parametrize("decimal", [",", "."])
+def test_a_record_with_another_separator_is_told(tmp_path, decimal):
+    days("2027-03-01", 9).to_csv(tmp_path / "h.csv", index=False, sep=";", decimal=decimal)
+    (said,) = faults(spec_file(tmp_path, {**FILE, "time": "day"}, DAILY))
+    assert said.endswith("; semicolons part its names: use commas, and write numbers with a decimal point")
+
+
 def test_a_record_by_another_clock_is_told_with_the_nearest_step(tmp_path):
     at = pd.date_range("2027-03-01", periods=9, freq="D", tz="UTC")
     table = pd.DataFrame({"day": at.astype(str), "load": 1.0})
