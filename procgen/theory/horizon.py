@@ -42,11 +42,15 @@ DETERMINED = 1e-12  # share of a variance that counts as nothing left
 
 @dataclass(frozen=True)
 class Forecast:
-    """Mean and variance of a series at `steps`, given values before them; float64 of the shape of `steps`."""
+    """Mean and variance of a series at `steps`, given values before them; of the shape of the horizons asked for."""
 
     steps: np.ndarray
     mean: np.ndarray
     variance: np.ndarray
+
+    def __post_init__(self) -> None:
+        for name in ("steps", "mean", "variance"):  # one horizon gives numbers, and no arrays without an axis
+            object.__setattr__(self, name, np.asarray(getattr(self, name))[()])
 
 
 def variance_given_parts(x: Expression, horizons: np.ndarray) -> np.ndarray:

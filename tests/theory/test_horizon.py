@@ -226,6 +226,14 @@ def test_a_forecast_from_values_against_sarimax():
     np.testing.assert_allclose(found.variance, expected.var_pred_mean[H - 1], rtol=1e-10)
 
 
+def test_one_horizon_gives_numbers():
+    x = series_of({"ar": {"phi": 0.5, "sd": 1}})
+    for history in ([], [2.0]):
+        found = x.forecast(3, history)
+        assert isinstance(found.mean, float) and isinstance(found.variance, float)
+        assert x.forecast([3], history).mean.tolist() == [found.mean]
+
+
 def test_a_forecast_from_a_known_start_and_from_before():
     """A local level known at step 0 by statsmodels' filter; a stated past by its recursion; a past that cannot be."""
     y = np.array([1.0, 2.0, 0.5, 1.5])
