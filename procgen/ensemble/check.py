@@ -102,7 +102,7 @@ class DigestResult:
         elif self.redrawn:
             paths = sum(block.paths for block in self.redrawn)
             lines.append(f"drawn again: {paths} paths, all the same bits")
-        if self.damages and self.digest is not None:
+        if self.damages and self.difference is None and self.digest is not None:
             names = dict.fromkeys(damage.series or damage.file for damage in self.damages)
             lines.append(f"not in order: {', '.join(names)}, as said above")
         return "\n".join(lines)
