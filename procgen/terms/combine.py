@@ -134,7 +134,7 @@ class Exp(Term):
     purpose = "the exponential of its body: a level that cannot fall below 0"
     source = "Aitchison & Brown (1957) for the lognormal moments"
     example = "exp: [{random_walk: {sd: 0.01, start: 3.9}}]"
-    knows = "mean, covariance and lognormal law for a Gaussian body"
+    knows = "mean, covariance and lognormal law for a Gaussian body; moments for shocks of most laws, where they exist"
     composition = True
     parameters = (OF,)
 

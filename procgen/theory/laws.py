@@ -6,9 +6,10 @@ from typing import Any
 
 import numpy as np
 
+from procgen.theory import exponentials
 from procgen.theory.covariance import covariance
 from procgen.theory.expression import Expression
-from procgen.theory.linear import At
+from procgen.theory.linear import At, Linear
 from procgen.theory.monomials import Term
 from procgen.theory.sources import GARCH, IID, OPAQUE, PROCESS, SQUARES, Source, Space
 from procgen.theory.unknown import Unknown
@@ -122,13 +123,21 @@ def _lognormal(space: Space, term: Term, scale: float, level: float, at: np.ndar
 def _orders(space: Space, term: Term) -> list[float]:
     if term.summed is not None:
         return _orders(space, term.summed)
-    if any(not source.gaussian for source in term.exponent.sources):
-        raise Unknown("an exponential of what is not Gaussian may have no moments")
-    orders = []
+    orders = [_exponential_order(space, term.exponent.only(group)) for group in space.components(term.exponent.sources)]
     for group in space.components(term.sources):
         degree = sum(bool(form.only(group)) for form in term.factors)
         orders += [_order(source) / max(degree, 1) for source in group]  # Hoelder, for dependent factors
     return orders
+
+
+def _exponential_order(space: Space, form: Linear) -> float:
+    """The order below which moments of exp(form) exist, for a form of sources that depend on each other."""
+    if space.gaussian(form.sources):
+        return float(np.inf)
+    if len(form.sources) > 1 or any(source.kind != IID for source in form.sources):
+        raise Unknown("an exponential of what is not Gaussian may have no moments")
+    (source,) = form.sources
+    return exponentials.order(source, form)
 
 
 def _order(source: Source) -> float:

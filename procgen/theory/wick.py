@@ -15,7 +15,7 @@ from itertools import product as choices
 
 import numpy as np
 
-from procgen.theory import cumulants
+from procgen.theory import cumulants, exponentials
 from procgen.theory.covariance import covariance
 from procgen.theory.linear import Linear
 from procgen.theory.sources import GARCH, IID, OPAQUE, PROCESS, Source, Space
@@ -148,7 +148,9 @@ def _few_moments(space, group, factors, tilts, t, s) -> Pair:
         heavy = [source for tilt in tilts for source in tilt.sources if source.power_tailed]
         if heavy:
             raise Unknown(f"an exponential of {_names(heavy)} has no finite mean: its tails are power laws")
-        raise Unknown(f"moments of {_names(group)} in or beside an exponential have no closed form")
+        if len(group) == 1 and group[0].kind == IID and not factors:
+            return exponentials.of_shocks(group[0], tilts, t, s)
+        raise Unknown(f"moments of {_names(group)} in or beside an exponential are not worked out")
     if order == 1 or (order % 2 and all(source.symmetric for source in group)):
         return zero, zero  # flipping all signs turns an odd product round
     one = group[0] if len(group) == 1 else None

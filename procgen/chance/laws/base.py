@@ -132,6 +132,18 @@ class Law:
         """The rates q below which E exp(q abs(z)) over the lower and over the upper side is finite."""
         return (math.inf, math.inf) if math.isinf(self.highest_moment) else (0.0, 0.0)
 
+    def growth(self, rate: float) -> float | None:
+        """log E exp(rate z): inf where that is infinite, None where it is finite and has no elementary form."""
+        lower, upper = self.exponential_moments
+        if rate == 0.0:
+            return 0.0
+        end = upper if rate > 0.0 else lower
+        return self._growth(rate) if abs(rate) < end else math.inf
+
+    def _growth(self, rate: float) -> float | None:
+        """The same where it is finite."""
+        return None
+
     def distribution(self) -> Any:
         """The law as a frozen SciPy distribution: pdf, cdf, sf, ppf, isf, moment."""
         raise NotImplementedError

@@ -62,6 +62,9 @@ class NormalMixture(Law):
     def moment(self, k: int) -> float:
         return Normals(self.standardised).moment(k)
 
+    def _growth(self, rate: float) -> float:
+        return Normals(self.standardised).growth(rate)
+
     def distribution(self) -> Any:
         return _distribution(self)
 

@@ -142,6 +142,13 @@ class Empirical(Law):
             for j in range(0, k + 1, 2)
         )
 
+    def _growth(self, rate: float) -> float:
+        if not self.bandwidth:
+            return _points(self).growth(rate)
+        means, sd = self.normals
+        blurred = rate * sd
+        return Points(means, np.full(len(means), 1 / len(means))).growth(rate) + blurred * blurred / 2
+
     def distribution(self) -> Any:
         return _smooth(self) if self.bandwidth else _points(self).distribution()
 

@@ -57,6 +57,9 @@ class Mixture(Law):
     def moment(self, k: int) -> float:
         return Normals(self.components).moment(k)
 
+    def _growth(self, rate: float) -> float:
+        return Normals(self.components).growth(rate)
+
     def distribution(self) -> Any:
         return _distribution(self)
 
@@ -108,6 +111,13 @@ class Normals:
             for w, mean, sd in self.parts
             for j in range(0, k + 1, 2)
         )
+
+    def growth(self, rate: float) -> float:
+        """log E exp(rate z)."""
+        from scipy.special import logsumexp
+
+        exponents = [mean * rate + (sd * rate) ** 2 / 2 for _, mean, sd in self.parts]
+        return float(logsumexp(exponents, b=[w for w, _, _ in self.parts]))
 
     def distribution(self) -> Any:
         """Their mixture as a frozen SciPy distribution."""

@@ -55,6 +55,12 @@ class Points:
         """E z^k."""
         return float(np.dot(self.chances, self.values**k))
 
+    def growth(self, rate: float) -> float:
+        """log E exp(rate z)."""
+        from scipy.special import logsumexp
+
+        return float(logsumexp(rate * self.values, b=self.chances))
+
     def expect(self, f: Callable[[float], float]) -> float:
         """E f(z)."""
         return float(np.dot(self.chances, [f(value) for value in self.values.tolist()]))
@@ -158,6 +164,9 @@ class Bernoulli(Law):
     def moment(self, k: int) -> float:
         low, high = self.ends
         return (1 - self.p) * low**k + self.p * high**k
+
+    def _growth(self, rate: float) -> float:
+        return self.points.growth(rate)
 
     def distribution(self) -> Any:
         return self.points.distribution()

@@ -46,6 +46,10 @@ class Gamma(Law):
     def exponential_moments(self) -> tuple[float, float]:
         return math.inf, math.sqrt(self.shape)
 
+    def _growth(self, rate: float) -> float:
+        root = math.sqrt(self.shape)
+        return -root * rate - self.shape * math.log1p(-rate / root)
+
     def distribution(self) -> Any:
         from scipy.stats import gamma
 

@@ -39,6 +39,9 @@ class Normal(Law):
     def moment(self, k: int) -> float:
         return 0.0 if k % 2 else float(math.prod(range(1, k, 2)))
 
+    def _growth(self, rate: float) -> float:
+        return rate * rate / 2
+
     def distribution(self) -> Any:
         from scipy.stats import norm
 
@@ -63,6 +66,9 @@ class Laplace(Law):
     @property
     def exponential_moments(self) -> tuple[float, float]:
         return 1 / _ROOT_HALF, 1 / _ROOT_HALF
+
+    def _growth(self, rate: float) -> float:
+        return -math.log1p(-rate * rate / 2)
 
     def distribution(self) -> Any:
         from scipy.stats import laplace
@@ -93,6 +99,10 @@ class Logistic(Law):
     def exponential_moments(self) -> tuple[float, float]:
         return 1 / _ROOT_3_PER_PI, 1 / _ROOT_3_PER_PI
 
+    def _growth(self, rate: float) -> float:
+        x = math.pi * _ROOT_3_PER_PI * abs(rate)
+        return math.log(x / math.sin(x))
+
     def distribution(self) -> Any:
         from scipy.stats import logistic
 
@@ -113,6 +123,12 @@ class Uniform(Law):
 
     def moment(self, k: int) -> float:
         return 0.0 if k % 2 else 3.0 ** (k // 2) / (k + 1)
+
+    def _growth(self, rate: float) -> float:
+        x = _ROOT_3 * abs(rate)
+        if x < 0.01:
+            return x * x / 6 - x**4 / 180
+        return x + math.log(-math.expm1(-2 * x) / (2 * x))
 
     def distribution(self) -> Any:
         from scipy.stats import uniform

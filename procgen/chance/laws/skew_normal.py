@@ -62,6 +62,13 @@ class SkewNormal(Law):
         normal = [0.0 if j % 2 else math.prod(range(1, j, 2)) * (1 - d * d) ** (j // 2) for j in range(k + 1)]
         return sum(math.comb(k, j) * centred(j) * normal[k - j] for j in range(k + 1)) / sd**k
 
+    def _growth(self, rate: float) -> float:
+        from scipy.special import log_ndtr
+
+        mean, sd = self.mean_and_sd
+        q = rate / sd
+        return math.log(2) + q * q / 2 + float(log_ndtr(self._delta * q)) - mean * q
+
     def distribution(self) -> Any:
         return _distribution(self)
 
