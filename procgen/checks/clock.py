@@ -108,7 +108,8 @@ def steps_on_grid(times: Times, time: Any) -> NDArray[np.int64]:
     """
     grid = _grid(time, time.steps)
     if _lacks_hours(times, grid):
-        raise ClockError(f"{_no_hours(times, time)}, or name a column of whole steps with --step-col NAME")
+        other = 'name a column of whole steps with --step-col NAME (columns={"step": NAME})'
+        raise ClockError(f"{_no_hours(times, time)}, or {other}")
     step, on = _placed(grid, times.utc)
     if not on.all() and times.local is not None:
         moved, fits = _placed(grid, times.local)

@@ -147,8 +147,8 @@ class Table:
         if bad.any():
             row = int(np.argmax(bad))
             raise TableError(
-                f"{self.where}: expected whole steps in {name}, got {_cell(column, row)} in row {row}; name another "
-                "column with --step-col NAME, or one of times with --time-col NAME"
+                f"{self.where}: expected whole steps in {name}, got {_cell(column, row)} in row {row}; "
+                f'{option("step")}, or one of times with --time-col NAME (columns={{"time": NAME}})'
             )
         step = numbers.astype(np.int64)
         lowest = int(step.min())
@@ -168,7 +168,7 @@ class Table:
             times = Times(column, self.spec.time.zone)
             return steps_on_grid(times, self.spec.time)
         except NoTime as error:
-            other = f"{option('time')}, or one of whole steps with --step-col NAME"
+            other = f"{option('time')}, or one of whole steps with --step-col NAME (columns={{\"step\": NAME}})"
             raise TableError(f"{self.where}: {error}; {other}") from None
         except ClockError as error:
             raise TableError(f"{self.where}: {error}") from None
