@@ -11,6 +11,7 @@ import math
 from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING
 
+from procgen.checks.lifted import Lifted
 from procgen.checks.words import FARTHEST, FARTHEST_SHOCK, is_signed, of_stays, sort_of
 
 if TYPE_CHECKING:
@@ -64,7 +65,7 @@ def _of_series(rows: Sequence[Check], sizes: Mapping[str, float]) -> Groups:
     if stays:  # a series of states is judged by them: all else that is off about it follows
         kinds["memory"] = stays + [row for row in kinds["memory"] if not of_stays(row)]
         return [kinds[kind] for kind in sorted(kinds, key=lambda kind: (kind != FARTHEST, kind != "memory"))]
-    follows = _following(rows, kinds)
+    follows = _following(rows, kinds) | _lifted(rows, kinds, sizes)
     order = sorted(kinds, key=lambda kind: (kind != FARTHEST, kind in follows, -_gain(kinds[kind][0], sizes)))
     if order:
         behind = _BEHIND.get(order[0], _nothing)(rows, kinds)
@@ -119,6 +120,15 @@ def _following(rows: Sequence[Check], kinds: Mapping[str, list[Check]]) -> set[s
         if all(_LIKE * abs(row.estimate or 0.0) <= found.spread_score for row in scores):
             follows.add("spread")
     return follows
+
+
+def _lifted(rows: Sequence[Check], kinds: Mapping[str, list[Check]], sizes: Mapping[str, float]) -> set[str]:
+    """Kinds of which the level explains all that weighs more than itself: squares and products about a mean."""
+    if "level" not in kinds:
+        return set()
+    lifted, level = Lifted(rows), _gain(kinds["level"][0], sizes)
+    more = {kind: [row for row in group if _gain(row, sizes) > level] for kind, group in kinds.items()}
+    return {kind for kind, group in more.items() if group and all(lifted.explains(row) for row in group)}
 
 
 def _nothing(rows: Sequence[Check], kinds: Mapping[str, list[Check]]) -> str | None:

@@ -37,19 +37,21 @@ _BETWEEN_PATHS = ("neighbouring paths", BALANCE)  # how the checks end
 _WHOLE = {
     "shocks: level by step": "the shocks' mean at a step is off by {} of their sd, root mean square",
     "shocks: level by phase": "the shocks' mean at a phase of the season is off by {} of their sd, root mean square",
-    "shocks: spread by step": "the shocks' spread differs from step to step, by {} a shock",
+    "shocks: spread by step": "the shocks' sd differs from step to step, by about {} %, root mean square",
     "shocks: level by path": "each path keeps a level of its own, by {} of a shock's sd, root mean square",
-    "shocks: spread by path": "each path keeps a spread of its own, by {} a shock",
+    "shocks: spread by path": "the shocks' sd differs from path to path, by about {} %, root mean square",
     BALANCE: "the paths' mean shock has {} of the variance that independent paths give it",
     START: "the first values' mean size, y²/(1 + y²) for y in sd, less that of the last ones is {}",
     "shocks: shape of the law": "the shocks' density is off by {}, root mean square",
     "shocks: distribution function": "the shocks' distribution function is off by up to {}",
 }
+_PERCENT = ("shocks: spread by step", "shocks: spread by path")
+_SCORE = 50.0 * math.sqrt(2.0)  # a variance off by a moves the normal score of a shock's size by a/√2, its sd by a/2
 _CORRELATIONS = {
-    "autocorrelation": "standardised autocovariance",
-    "correlation between series": "standardised covariance between series",
-    "neighbouring paths": "standardised covariance of neighbouring paths",
-    "clustering": "standardised covariance of sizes",
+    "autocorrelation": "autocovariance in stated variances",
+    "correlation between series": "covariance between series in stated sd",
+    "neighbouring paths": "covariance of neighbouring paths in stated variances",
+    "clustering": "covariance of sizes in stated variances",
 }  # how checks end whose estimate is a correlation as long as spreads are as stated -> what it is in any case
 _DRAWN = ": distribution function"  # how the check of a drawn parameter ends
 FARTHEST, FARTHEST_SHOCK = "farthest value", "shocks: farthest"
@@ -164,7 +166,8 @@ def _seen(top: Check) -> str:
     if top.what.endswith(_DRAWN) and top.what not in _WHOLE:
         return f"the distribution function of {top.what.removesuffix(_DRAWN)} is off by up to {number(top.estimate, 4)}"
     if top.what in _WHOLE and not top.probe.startswith("worst"):
-        return _WHOLE[top.what].format(number(top.estimate, 4))
+        factor = _SCORE if top.what in _PERCENT else 1.0
+        return _WHOLE[top.what].format(number((top.estimate or 0.0) * factor, 4 if factor == 1.0 else 2))
     if top.probe.startswith("worst"):
         return f"{name_of(top)} is off most at {top.probe.removeprefix('worst: ')}, by {number(top.estimate, 4)} se"
     where = f" at {top.probe}" if top.probe else ""

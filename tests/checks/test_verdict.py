@@ -173,7 +173,7 @@ def test_shares_of_events_have_plain_names():
 
 
 def test_a_correlation_is_called_so_only_where_it_can_be_one():
-    for estimate, name in ((0.4, "shocks: autocorrelation"), (-7.5e6, "shocks: standardised autocovariance")):
+    for estimate, name in ((0.4, "shocks: autocorrelation"), (-7.5e6, "shocks: autocovariance in stated variances")):
         row = of("shocks: autocorrelation", estimate, -5000.0, "memory", probe="lag 1")
         verdict = Verdict([row], 0.001)
         assert f"({name} at lag 1 is " in verdict.headline[0]
