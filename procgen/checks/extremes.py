@@ -9,6 +9,7 @@ from __future__ import annotations
 import math
 from collections import Counter
 from collections.abc import Callable, Iterator, Sequence
+from functools import cached_property
 from typing import Any
 
 import numpy as np
@@ -25,7 +26,8 @@ _FARTHEST = 1e300  # standard deviations that are told apart
 _CHUNK = 1 << 15  # steps whose theory is asked for at once, at most
 _OUTSIDE = math.log(0.05)  # of a value that is farther than all values of N should be
 _ABSURD = 2.0  # times as far as the farthest of N should be
-_RARE = 1000  # one absurd value in so many is an accident, more of them are a behaviour
+_RARE = 100  # one absurd value in so many is an accident, more of them are a behaviour
+_MOSTLY = 0.5  # share of what is outside that is absurd: of a tail that is too heavy, most is just outside
 
 Far = list[Any]  # size in sd, minus path, minus step, value, mean, sd: a list, as JSON has it
 
@@ -33,8 +35,8 @@ Far = list[Any]  # size in sd, minus path, minus step, value, mean, sd: a list, 
 class Reach:
     """Mean and standard deviation of every step of a series, and the chance of a value so far away."""
 
-    def __init__(self, theory: Any, grain: float, steps: int = _CHUNK):
-        self.theory, self.grain, self.size = theory, grain, min(steps, _CHUNK)
+    def __init__(self, theory: Any, grain: float, steps: int = _CHUNK, n: int = 0):
+        self.theory, self.grain, self.size, self.n = theory, grain, min(steps, _CHUNK), n
         self._chunks: dict[int, tuple[NDArray, NDArray]] = {}
         self._kurtosis: dict[int, float | None] = {}
 
@@ -66,6 +68,25 @@ class Reach:
             place = -first_path - path, -first_step - row
             found.append([float(sizes[at, path]), *place, float(x[row, path]), float(mean[row]), float(sd[row])])
         return merged(found)
+
+    def beyond(self, x: NDArray, first_step: int, ends: tuple[NDArray, NDArray] | None = None) -> list[int]:
+        """How many values of a tile are outside of what n values reach, and how many are absurd; `ends` as above."""
+        mean, sd = self._at(first_step, len(x))
+        with np.errstate(invalid="ignore", divide="ignore", over="ignore"):
+            low, high = ends or (np.fmin.reduce(x, axis=1), np.fmax.reduce(x, axis=1))
+            rows = np.flatnonzero(np.maximum(high - mean, mean - low) > self._allowed * sd)
+            if not rows.size:
+                return [0, 0]
+            sizes = np.abs(x[rows] - mean[rows, None]) / sd[rows, None]
+        sizes[~np.isfinite(x[rows])] = 0.0
+        return [int(np.count_nonzero(sizes > times * self._allowed)) for times in (1.0, _ABSURD)]
+
+    @cached_property
+    def _allowed(self) -> float:
+        """About how far, in sd, the farthest of n values may lie at the last step."""
+        sd = self._at(self.size - 1, 1)[1][0]
+        known = self.n > 0 and np.isfinite(sd)
+        return _reach(self, [0.0, 0, 1 - self.size, math.nan, math.nan, float(sd)], self.n) if known else math.inf
 
     def _at(self, first: int, count: int) -> tuple[NDArray, NDArray]:
         chunks = [self._chunk(k) for k in range(first // self.size, (first + count - 1) // self.size + 1)]
@@ -122,31 +143,40 @@ def merged(found: Sequence[Far]) -> list[Far]:
     return kept
 
 
-def checks(series: str, reach: Reach, known: Sequence[Far], n: int) -> Iterator[Check]:
-    """Whether the farthest of n values of a series is no farther than chance carries it."""
+def checks(
+    series: str, reach: Reach, known: Sequence[Far], n: int, beyond: Sequence[int] = (0, 0)
+) -> Iterator[Check]:
+    """Whether the farthest of n values of a series is no farther than chance carries it; `beyond` as of Reach."""
     if not known:
         return
     first = known[0]
     logs = [math.log(n) + reach.log_chance(far) for far in known]
     outside = sum(log_p < _OUTSIDE for log_p in logs)
     allowed = _reach(reach, first, n)
-    absurd = [far[3] for far in known[:outside] if far[0] > _ABSURD * allowed]
-    same = outside > 1 and len(set(absurd)) == 1
-    alone = (same or outside <= min(COUNTED - 1, max(1, n // _RARE))) and first[0] > _ABSURD * allowed
+    absurd = sum(far[0] > _ABSURD * allowed for far in known[:outside])
+    same = outside > 1 and len({far[3] for far in known[:outside]}) == 1
+    if outside >= COUNTED:  # more than are kept
+        outside, absurd = max(outside, beyond[0]), beyond[1]
+    few = outside <= max(1, n // _RARE) and absurd >= (1 if outside <= 3 else _MOSTLY * outside)
+    alone = (same or few) and first[0] > _ABSURD * allowed
     # A few absurd values, or one that stands for all, are a fault of the data; others speak of the law.
     kind = "structure" if alone or not outside else "law"
     finding = Finding(first[4], first[3], first[5], min(0.0, logs[0]), _detect(reach, first, n))
     check = Check.of(series, FARTHEST, f"path {-first[1]}, step {-first[2]}", kind, finding)
     if outside:
-        some = f"{outside} values" if outside < COUNTED else f"at least {COUNTED} values"
-        many = "one value" if outside == 1 else some
-        each = "" if outside == 1 else "such as " if same else "the farthest "
-        check.note = (
-            f"{many} {'far ' if alone else ''}outside what the law allows: {each}{check.probe}, value "
-            f"{number(first[3], 6)} (expected about {number(first[4], 4)} ± {number(first[5], 3)})"
-        )
-        check.note += "; all of them are this value, as if it marked what is missing" if same and alone else ""
+        check.note = _told(check.probe, first, outside if outside < COUNTED else beyond[0], alone, same)
     yield check
+
+
+def _told(place: str, first: Far, count: int, alone: bool, same: bool) -> str:
+    """The values outside in words; a count of 0 is more than are kept."""
+    many = "one value" if count == 1 else f"{count:,} values" if count else f"at least {COUNTED} values"
+    each = "" if count == 1 else "such as " if same else "the farthest "
+    mark = "; all of them are this value, as if it marked what is missing" if same and alone else ""
+    return (
+        f"{many} {'far ' if alone else ''}outside what the law allows: {each}{place}, value "
+        f"{number(first[3], 6)} (expected about {number(first[4], 4)} ± {number(first[5], 3)}){mark}"
+    )
 
 
 def _reach(reach: Reach, far: Far, n: int) -> float:

@@ -44,6 +44,7 @@ class Structure:
     off_grid: dict[str, list[int]] = field(default_factory=dict)
     narrow: dict[str, list[int]] = field(default_factory=dict)  # series -> [values that fit float32, whole ones, all]
     far: dict[str, list[extremes.Far]] = field(default_factory=dict)  # series -> its values farthest from their mean
+    beyond: dict[str, list[int]] = field(default_factory=dict)  # series -> numbers of values outside, and absurd ones
     outside: dict[str, support.Found] = field(default_factory=dict)  # series -> values that it cannot give
     moved: dict[str, support.Found] = field(default_factory=dict)  # series -> values that should have been held
     runs: dict[str, copies.Run] = field(default_factory=dict)  # series -> its longest run of one value
@@ -75,6 +76,8 @@ class Structure:
                 seen[k] += count
         if what.reach is not None:
             self.far[what.name] = what.reach.farthest(x, first_path, first_step, self.far.get(what.name, ()), ends)
+            more = what.reach.beyond(x, first_step, ends)
+            self.beyond[what.name] = [a + b for a, b in zip(self.beyond.get(what.name, (0, 0)), more, strict=True)]
         outside = what.possible.outside(x)
         if outside is not None:
             support.note(self.outside, what.name, outside, x, first_path, first_step)
@@ -125,6 +128,8 @@ class Structure:
             self.narrow[name] = [a + b for a, b in zip(self.narrow.get(name, [0, 0, 0]), counts, strict=True)]
         for name, values in other.far.items():
             self.far[name] = extremes.merged([*self.far.get(name, ()), *values])
+        for name, counts in other.beyond.items():
+            self.beyond[name] = [a + b for a, b in zip(self.beyond.get(name, (0, 0)), counts, strict=True)]
         support.merge(self.outside, other.outside)
         support.merge(self.moved, other.moved)
         for name, run in other.runs.items():
@@ -140,7 +145,7 @@ class Structure:
             yield from support.checks(what.name, what.possible, self.outside.get(what.name), self.moved.get(what.name))
             if what.reach is not None:
                 n = self.steps * sum(len(rows) for _, rows in self.prints)
-                yield from extremes.checks(what.name, what.reach, self.far.get(what.name, ()), n)
+                yield from extremes.checks(what.name, what.reach, self.far.get(what.name, ()), n, self.beyond.get(what.name, (0, 0)))
         if self.prints:
             yield from self._copies(chance_of_equal)
             yield from self._repeats()

@@ -143,7 +143,7 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
         series.append(plan)
         routes[name] = way
         random = th[name].random
-        reach = Reach(th[name], grain, steps) if random else None
+        reach = Reach(th[name], grain, steps, spec.paths * steps) if random else None
         possible = possible_of(graph, name, declared, vanishes(th[name], steps)) if random else Possible()
         kind = column_type(graph, name)
         precision.append(
@@ -264,6 +264,9 @@ def _shocks(gather: Gather, name: str) -> Iterator[Check]:
     yield from shock_checks(name, sums, way.words)
     ranks = way.ranked is not None or way.few is not None
     yield from farthest.checks(name, sums.scores, sums.far, sums.n, noise, ranks)
+    points = getattr(sums.scores.law, "points", None) is not None or lumpy(way.theory)
+    if not (ranks or points or noise or way.grain):
+        yield from farthest.ties(name, sums.far)
     if name in gather.events:
         yield from gather.events[name].checks(name)
 

@@ -113,7 +113,7 @@ def test_a_value_that_marks_what_is_missing_is_told_as_one():
     values = draw(spec_of(AR, 400, 200, 3))
     values["x"][np.random.default_rng(1).random((400, 200)) < 0.01] = -999.0
     line = verdict(AR, values).headline[0]
-    assert line.startswith("x: at least 32 values far outside what the law allows: such as path ")
+    assert line.startswith(f"x: {np.count_nonzero(values['x'] == -999.0)} values far outside what the law allows: such as path ")
     assert "value −999 (expected about 10 ± 1.25); all of them are this value, as if it marked what is missing" in line
 
 
@@ -145,6 +145,24 @@ def test_many_values_that_differ_are_not_taken_for_a_mark():
     verdict_of_all = verdict(AR, values)
     assert verdict_of_all.agrees is False
     assert "as if it marked" not in "".join(row.note for row in verdict_of_all.rows)
+
+
+@pytest.mark.parametrize("count", [31, 32, 40, 800])
+def test_a_small_share_of_spikes_is_told_first(count):
+    values = draw(spec_of(AR, 400, 200, 3))
+    at = np.random.default_rng(2).choice(80_000, count, replace=False)
+    values["x"].ravel()[at] += 15 * 1.25
+    line = verdict(AR, values).headline[0]
+    assert line.startswith(f"x: {count} values far outside what the law allows: the farthest path ")
+    assert "as if it marked" not in line
+
+
+def test_a_law_with_heavier_tails_is_told_as_a_law():
+    shocks = {"ar": {"phi": 0.6, "sd": 1, "law": {"student_t": {"df": 5}}}}
+    values = draw(spec_of([{"constant": 10}, shocks], 1000, 200, 3))
+    found = verdict(AR, values)
+    assert found.headline[0].startswith("x: law: ")
+    assert "as if it marked" not in "".join(row.note for row in found.rows)
 
 
 BODIES = {
