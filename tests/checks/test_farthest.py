@@ -26,22 +26,59 @@ def found(rows):
 def test_p_of_the_farthest_of_n_is_that_of_the_largest_of_n_normals_in_size(size, n):
     (check,) = checks("x", NORMAL, [[size, -3, -2, size, 7.0]], n)
     # The largest of n sizes has the n-th power of the half-normal's distribution function (scipy.stats).
-    p = -np.expm1(n * np.log1p(-2 * stats.norm.sf(size)))
-    assert check.log_p == pytest.approx(np.log(p), rel=1e-9) if p > 0 else check.log_p < -700
-    assert (check.probe, check.estimate) == ("path 2, step 3", pytest.approx(size))
+    below = n * np.log1p(-2 * stats.norm.sf(size))
+    above = np.log(-np.expm1(below)) if below < -1e-290 else -750.0
+    assert check.log_p == pytest.approx(np.log(2) + min(below, above), rel=1e-9) if above > -700 else check.log_p < -400
+    assert (check.probe, check.estimate) == ("path 2, step 3" if above < below else "all steps", pytest.approx(size))
+
+
+@pytest.mark.parametrize("n", [1_000, 100_000])
+def test_no_shock_beyond_three_sd_is_judged_as_if_one_were_there(n):
+    (check,) = checks("x", NORMAL, [], n)
+    assert check.log_p == pytest.approx(min(0, np.log(2) + n * np.log1p(-2 * stats.norm.sf(3))), rel=1e-9)
+    assert check.note.startswith("tails are cut: of 100,000 shocks none ") if n > 1000 else not check.note
+
+
+CUT = {
+    "white noise": ([{"white_noise": {"sd": 2}}], lambda x: np.clip(x, -6, 6)),
+    "t(5)": ([{"white_noise": {"sd": 2, "law": {"student_t": {"df": 5}}}}], lambda x: np.clip(x, -8, 8)),
+    "uniform": ([{"white_noise": {"sd": 2, "law": "uniform"}}], lambda x: np.clip(x, -3.46, 3.46)),
+}
+
+
+@pytest.mark.parametrize("name", CUT)
+def test_tails_that_are_cut_are_named(name):
+    body, cut = CUT[name]
+    values = draw(spec_of(body, 500, 200, 3))
+    assert verdict(body, values).agrees is True
+    values["x"] = cut(values["x"])
+    judged = verdict(body, values)
+    assert any("equal, the first at path " in line or "tails are cut" in line for line in judged.headline)
+    note = found(judged.rows).note
+    assert note.startswith("tails are cut: of 100,000 shocks none is farther out than ") or name == "uniform"
+
+
+def test_shocks_that_are_clipped_are_named_though_values_are_not():
+    z = np.clip(np.random.default_rng(4).standard_normal((500, 300)), -3.5, 3.5)
+    values = np.zeros(z.shape)
+    for t in range(z.shape[1]):
+        values[:, t] = z[:, t] * (1 if t else 0.51**-0.5) + (0.7 * values[:, t - 1] if t else 0)
+    judged = verdict(AR, {"x": values})
+    assert "are equal, the first at path " in judged.headline[0] and "as if cut there" in judged.headline[0]
+    assert any(row.note.startswith("tails are cut: ") for row in judged.rows if row.outcome == "departs")
 
 
 def test_a_uniform_is_never_said_to_be_finer_than_a_double():
     end = 3.0**0.5
     (check,) = checks("x", UNIFORM, [[8.3, 0, 0, end, 600.0]], 100_000, ranks=True)
-    assert check.log_p == pytest.approx(np.log(2e-15 * 100_000), rel=1e-6)
+    assert check.log_p == pytest.approx(np.log(2 * 2e-15 * 100_000), rel=1e-6)
     # Rounding may have carried it there: 10 standard deviations of it are taken off.
     (check,) = checks("x", UNIFORM, [[8.3, 0, 0, end, 600.0]], 1000, noise=1e-12)
-    assert check.log_p == pytest.approx(np.log(-np.expm1(1000 * np.log1p(-2e-5 / (2 * end)))), rel=1e-3)
+    assert check.log_p == pytest.approx(np.log(-2 * np.expm1(1000 * np.log1p(-2e-5 / (2 * end)))), rel=1e-3)
 
 
 def test_true_shocks_are_flagged_as_often_as_stated():
-    z = np.random.default_rng(6).standard_normal((50, 4000 * 20))
+    z = np.random.default_rng(6).standard_normal((50, 4000 * 80))
     p = []
     for rows in np.split(z, 4000, axis=1):
         p += [check.p for check in checks("x", NORMAL, farthest(rows, rows, rows, 0, 0, ()), rows.size)]

@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.chance.laws import LAWS
-from procgen.checks import apart, judge, judge_shocks
+from procgen.checks import apart, farthest, judge, judge_shocks
 from procgen.checks.judge import Finding, Sample
 from procgen.checks.scores import BINS, Scores, cluster_scores
 from procgen.checks.shocks import CrossSums, ShockLane, ShockSums
@@ -362,6 +362,22 @@ def worst_path(what: str, paths: int, steps: int) -> Findings:
     return findings
 
 
+def farthest_of(n: int) -> Findings:
+    """The farthest of n shocks, on both sides of its law."""
+    from scipy.special import ndtri_exp
+
+    scores = Scores(LAWS["normal"]())
+
+    def findings(rng: Rng, count: int) -> Iterator[tuple[Finding, int]]:
+        least = np.log(rng.random(count)) / n  # log of 1 − 2a of the farthest
+        size = -ndtri_exp(np.log(-np.expm1(least)) - math.log(2))
+        for z in size[np.abs(least * n + 2) > 1.9]:
+            far = [[float(z), 0, 0, float(z), float(z)]] if z > 3 else []
+            yield next(farthest.checks("x", scores, far, n)).finding, 1  # type: ignore[misc]
+
+    return findings
+
+
 def many_products(pairs: int) -> Findings:
     """As many products, each of two normals of its own."""
     return of_one_number(
@@ -515,6 +531,8 @@ CASES = (
     Case("shocks: level of the worst of 30 paths", 200_000, worst_path("level", 30, 20), 600),
     Case("shocks: spread of the worst of 30 paths", 200_000, worst_path("spread", 30, 20), 600),
     Case("shocks: memory of the worst of 30 paths", 50_000, worst_path("memory", 30, 20), 600),
+    Case("shocks: farthest of 2,000", 400_000, farthest_of(2000), 100),
+    Case("shocks: farthest of 1,000,000", 400_000, farthest_of(1_000_000), 100),
     Case("worst of 200 steps", 1_000_000, worst_of(200), 200),
     Case("sums of 6 squares", 10_000_000, squares(6)),
 )
