@@ -8,11 +8,11 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from procgen.spec.draws import NormalDraw
+from procgen.spec.draws import LognormalDraw, NormalDraw
 from procgen.theory.horizon import Forecast
 from procgen.theory.memory import _durbin_levinson, searched_half_life
 from procgen.theory.mixedlaw import MixedLaw, MixedNormals, Normal
-from procgen.theory.series import SeriesTheory, _counted, _steps
+from procgen.theory.series import OVERFLOW, SeriesTheory, _counted, _steps
 from procgen.theory.unknown import Unknown
 from procgen.theory.varied import Mixture, Node, sum_of
 from procgen.theory.verdict import Stationarity
@@ -47,11 +47,33 @@ class MixedSeries(SeriesTheory):
             series = node.theory[self.name]
             value = getattr(series, what)(*args)
             if value is None:
-                raise Unknown(series.reason(what) or f"{what} is not known given the parameters")
+                reason = series.reason(what) or f"{what} is not known given the parameters"
+                raise Unknown(self._too_large(node, what, *args) if reason == OVERFLOW else reason)
             if key is None:
                 return value
             node.known[key] = value
         return node.known[key]
+
+    def _too_large(self, node: Node, what: str, *args: Any) -> str:
+        """Why the average is not given where the theory at a node is beyond double precision.
+
+        An exponential of a power of what is drawn has no mean under a lognormal law, which has no exponential moments
+        (Johnson, Kotz & Balakrishnan 1994, ch. 14).
+        """
+        wide = [(name, p.varying.law) for name, p in self.mixture.parameters.items() if np.isinf(p.varying.law.high)]
+        if not wide:
+            return OVERFLOW
+        values = dict(zip(self.mixture.parameters, node.values, strict=True))
+        at = ", ".join(f"{name} = {value:.4g}" for name, value in values.items())
+        exponential = any(term.exponent for term in node.theory[self.name].expression.terms)
+        alone = len(values) == 1 and getattr(self.typical, what)(*args) is not None
+        if what == "covariance" and exponential and alone and isinstance(wide[0][1], LognormalDraw):
+            name, law = wide[0]
+            return (
+                f"infinite: given {name} it grows as an exponential of it, and the tail of {law} falls more slowly "
+                "than that; hold the draws `within` bounds"
+            )
+        return f"it is too large for double precision at {at}, which may be drawn: the average may be infinite"
 
     def _mean(self, steps: Any) -> NDArray:
         steps = _steps(steps)
@@ -61,9 +83,9 @@ class MixedSeries(SeriesTheory):
         t, s = np.broadcast_arrays(_steps(t), _steps(s))
 
         def answer(nodes: list[Node]) -> list[NDArray]:
+            within = [self._ask(n, "covariance", t, s) for n in nodes]  # first, for its reason where both are too large
             both = [(self._ask(n, "mean", t), self._ask(n, "mean", s)) for n in nodes]
             a, b = (sum_of(nodes, [pair[i] for pair in both]) for i in (0, 1))
-            within = [self._ask(n, "covariance", t, s) for n in nodes]
             return [c + (x - a) * (y - b) for c, (x, y) in zip(within, both, strict=True)]
 
         return self.mixture.average(answer)

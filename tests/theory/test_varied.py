@@ -66,6 +66,23 @@ def test_an_infinite_average_is_not_given_a_number():
     assert x.reason("variance") == "the average over x.ar.phi does not settle with 128 nodes: it may be infinite"
 
 
+def test_a_lognormal_volatility_has_prices_without_a_variance():
+    """Var x(t) is E exp(σ² t) − 1; a lognormal has no exponential moments (Johnson, Kotz & Balakrishnan 1994)."""
+    sd = path({"lognormal": {"median": 0.2, "sigma": 0.5}})
+    x = theory_of({"x": [{"geometric_brownian_motion": {"sd": sd}}]})["x"]
+    assert x.mean(np.array([0, 1, 50])) == pytest.approx(np.ones(3))
+    assert x.variance(np.array([0])) == pytest.approx(0.0, abs=1e-12)
+    assert x.variance(np.array([0, 1])) is None
+    assert x.reason("variance").startswith("infinite: given x.geometric_brownian_motion.sd")
+    held = path({"lognormal": {"median": 0.2, "sigma": 0.5, "within": [0.05, 1.0]}})
+    bounded = theory_of({"x": [{"geometric_brownian_motion": {"sd": held}}]})["x"]
+    low, high = (np.log(end / 0.2) / 0.5 for end in (0.05, 1.0))
+    grown, _ = integrate.quad(lambda z: np.expm1(0.04 * np.exp(z)) * stats.norm.pdf(z), low, high)
+    assert bounded.variance(np.array([1])) == pytest.approx(
+        grown / (stats.norm.cdf(high) - stats.norm.cdf(low)), rel=1e-9
+    )
+
+
 def test_random_effects():
     """Var = sd_b² + sd_w², and any two steps share sd_b²: the intraclass correlation of the textbook."""
     between, within = 2.0, 1.5
