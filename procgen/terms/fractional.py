@@ -19,7 +19,7 @@ from typing import ClassVar
 import numpy as np
 
 from procgen.chance.gamma import log_gamma
-from procgen.chance.kernel import kernel
+from procgen.chance.kernel import is_compiling, kernel
 from procgen.chance.laws import Normal
 from procgen.chance.portable import exp, log, lost, sin_turns
 from procgen.spec.declare import Parameter, Real, Reals
@@ -33,6 +33,7 @@ FASTEST, SLOWEST = 10, -128  # modes at λ = e^{kh}: from 37 to 1e-20
 STILL = 250  # slower ones, down to where they weigh nothing beside the slowest that moves
 LONGEST_BURN = 2**15
 SMOOTH = 12  # beyond this lag a second difference of a power is taken by its series
+NARROW = 64  # paths, from which on a call for each step before costs less than all of them at once
 
 
 @kernel
@@ -219,6 +220,14 @@ def predict(weights, past, z, out):
     out[0] = x
 
 
+def predicted(weights, past, z, out):
+    """`predict`, where few paths are not compiled by one call for all steps before: the same sums in the same order."""
+    if past.shape[1] >= NARROW or is_compiling():
+        predict(weights, past, z, out)
+    else:
+        out[:] = np.add.accumulate(np.concatenate([z, weights[:, None] * past[::-1]]), axis=0)[-1]
+
+
 class Predictors:
     """Best linear predictors of fractional Gaussian noise from all t values before (Durbin 1960; Levinson 1947)."""
 
@@ -300,7 +309,7 @@ class FractionalGaussianNoise(Term):
         x[: len(past)] = past
         for t in range(len(past), len(x)):
             weights, spread = predictors_of(self.hurst).at(t)
-            predict(weights, x[:t], spread * z[t - len(past) : t - len(past) + 1], x[t : t + 1])
+            predicted(weights, x[:t], spread * z[t - len(past) : t - len(past) + 1], x[t : t + 1])
         return x[len(past) :].copy(), {"x": x}
 
     def invert(self, values, known, state, at):
@@ -309,7 +318,7 @@ class FractionalGaussianNoise(Term):
         for t in range(len(past), len(x)):
             weights, spread = predictors_of(self.hurst).at(t)
             row = out[t - len(past) : t - len(past) + 1]
-            predict(-weights, x[:t], x[t : t + 1], row)
+            predicted(-weights, x[:t], x[t : t + 1], row)
             row /= spread * self.sd
         return out, {"x": x}
 

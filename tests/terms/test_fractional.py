@@ -9,6 +9,7 @@ from scipy.linalg import cholesky, toeplitz
 
 from procgen.chance.kernel import available, compiling
 from procgen.spec.model import SpecError
+from procgen.terms import fractional
 from procgen.terms.fractional import modes_of, predictors_of
 from procgen.theory import theory
 from procgen.theory.fractional import Filtered, FractionalNoise, GaussianNoise
@@ -165,3 +166,14 @@ def test_the_exact_recursion_refuses_more_steps_than_it_is_for():
         graph_of("  x: {fractional_gaussian_noise: {hurst: 0.7, sd: 1}}", steps=10_001)
     expected = "expected at most 10,000 steps with fractional_gaussian_noise, got 10,001; ask for fewer"
     assert error.value.faults[0].message == expected
+
+
+@pytest.mark.parametrize(("steps", "paths"), [(0, 2), (1, 1), (2, 3), (700, 1), (301, 30)])
+def test_few_paths_take_all_steps_before_in_one_call(steps, paths):
+    """The same bits as step by step: the sums are in the same order."""
+    rng = np.random.default_rng(1)
+    weights, past, z = rng.standard_normal(steps), rng.standard_normal((steps, paths)), rng.standard_normal((1, paths))
+    one, other = np.empty((1, paths)), np.empty((1, paths))
+    fractional.predict(weights, past, z, one)
+    fractional.predicted(weights, past, z, other)
+    np.testing.assert_array_equal(one, other)
