@@ -22,13 +22,24 @@ from procgen.checks.lane import Progress, in_one_process
 from procgen.checks.reshaped import LONG, Panel, Wide, recognised
 from procgen.checks.roles import Names, listed, option
 from procgen.checks.verdict import Check
-from procgen.checks.words import many
+from procgen.checks.words import joined, many
 from procgen.ensemble.plan import Block
 
 if TYPE_CHECKING:
     import pandas as pd
 
 _DECIMAL_COMMA = re.compile(r"[+-]?[\d.]*,\d+")
+_THOUSANDS = re.compile(r"[+-]?\d{1,3}(,\d{3})+(\.\d*)?")
+_SHOWN = 3  # cells of a column of text
+_ANOTHER = "is another column meant?"
+_NO_NUMBERS = {
+    "c": ("complex numbers", "give .real or .imag"),
+    "b": ("True and False", "give .astype(int) where they stand for 1 and 0"),
+    "M": ("times", _ANOTHER),
+    "m": ("durations", "give them in one unit, such as .dt.total_seconds()"),
+}  # kind of a column -> what it holds, and how to mend it
+_NO_NUMBERS |= {"boolean": _NO_NUMBERS["b"], "complex": _NO_NUMBERS["c"], "timedelta": _NO_NUMBERS["m"]}
+_NO_NUMBERS |= {each: _NO_NUMBERS["M"] for each in ("datetime", "datetime64", "date", "time", "period")}
 BLOCK = 1 << 22  # values of one series that are handed on at once
 
 
@@ -220,8 +231,12 @@ class Table:
     def _numbers(self, column: pd.Series, name: str) -> NDArray:
         import pandas as pd
 
-        if column.dtype.kind == "c":
-            raise TableError(f"{self.where}: {name} holds complex numbers; expected real ones (give .real or .imag)")
+        column = column.astype(column.cat.categories.dtype) if hasattr(column, "cat") else column
+        kind = column.dtype.kind if column.dtype.kind != "O" else pd.api.types.infer_dtype(column, skipna=True)
+        if kind in _NO_NUMBERS:
+            held, mend = _NO_NUMBERS[kind]
+            cell = _cell(column, int(np.argmax(column.notna().to_numpy())))
+            raise TableError(f"{self.where}: {name} holds {held}, such as {cell}; expected numbers ({mend})")
         if column.dtype.kind == "O" and isinstance(column.iloc[0], list | np.ndarray):
             raise TableError(
                 f"{self.where}: {name} holds lists (layout nested); {LONG}: a row a path and step, one number in each"
@@ -235,6 +250,17 @@ class Table:
                 raise TableError(
                     f"{self.where}: {name} has decimal commas, the first {cell!r} in row {row}; write numbers with a "
                     f"point, or read the file with pandas.read_csv(…, decimal=',') and give validate the DataFrame"
+                )
+            if isinstance(cell, str) and _THOUSANDS.fullmatch(cell.strip()):
+                raise TableError(
+                    f"{self.where}: {name} has thousands separators, the first {cell!r} in row {row}; write numbers "
+                    f"without them, or read the file with pandas.read_csv(…, thousands=',') and give validate the "
+                    f"DataFrame"
+                )
+            if count == column.notna().sum():
+                first = joined([repr(each) for each in dict.fromkeys(column.dropna())][:_SHOWN])
+                raise TableError(
+                    f"{self.where}: {name} holds text, such as {first}; expected numbers; {option(name)}"
                 )
             are = "value is no number" if count == 1 else "values are no numbers"
             fault = f"{count:,} {are}, the first {_cell(column, row)} in row {row}"

@@ -190,6 +190,25 @@ def test_missing_rows_are_named_once_and_a_window_as_a_window(frame):
     assert not any("not finite" in note for note in notes)
 
 
+@pytest.mark.parametrize(
+    ("spoil", "said"),
+    [
+        (lambda x: pd.Timestamp("2027-01-01"), "x holds times, such as 2027-01-01 00:00:00; expected numbers"),
+        (lambda x: pd.Timestamp("2027-01-01").date(), "x holds times, such as 2027-01-01; expected numbers"),
+        (lambda x: pd.Timedelta("1h"), "x holds durations, such as 0 days 01:00:00; expected numbers"),
+        (lambda x: x > -99, "x holds True and False, such as True; expected numbers"),
+        (lambda x: (x > -99).astype(object), "x holds True and False, such as True; expected numbers"),
+        (lambda x: np.where(x.index < 2, "abc", "d"), "x holds text, such as 'abc' and 'd'; expected numbers"),
+        (lambda x: pd.Categorical(["abc"] * len(x)), "x holds text, such as 'abc'; expected numbers"),
+        (lambda x: x.map(lambda v: f"1,{abs(v):07.3f}"), "x has thousands separators, the first '1,00"),
+    ],
+)
+def test_a_column_of_no_numbers_is_refused(frame, spoil, said):
+    with pytest.raises(TableError) as error:
+        validate(frame.assign(x=spoil(frame.x)), SPEC)
+    assert said in str(error.value)
+
+
 def test_complex_numbers_are_refused(frame):
     with pytest.raises(TableError, match="x holds complex numbers"):
         validate(frame.assign(x=frame["x"] + 1j), SPEC)
