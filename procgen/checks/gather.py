@@ -41,6 +41,7 @@ class Plan:
     gaps: dict[str, Any] = field(default_factory=dict)  # series -> the term that leaves values out
     noise: dict[str, float] = field(default_factory=dict)  # series -> variance that rounding adds to a shock
     relations: Sequence[Relation] = ()
+    strangers: Sequence[tuple[str, str]] = ()  # pairs of series that nothing ties
 
     def __post_init__(self) -> None:
         self.names = [plan.name for plan in self.series]

@@ -54,7 +54,7 @@ class Structure:
     def absorb(self, column: int, x: NDArray, first_path: int, first_step: int, prints: NDArray[np.uint64]) -> bool:
         """Look at a tile (steps, paths) of one series; `prints` (paths,) is updated. True when all is finite."""
         what = self.series[column]
-        finite, ends = _looked(x, first_step, column, prints)
+        finite, ends = _looked(x, first_step, prints)
         wrong = None if finite else np.isinf(x) if what.gaps else ~np.isfinite(x)
         if wrong is not None and wrong.any():
             _note(self.not_finite, what.name, wrong, first_path, first_step)
@@ -118,6 +118,11 @@ class Structure:
             self.marks[name] = copies.Marks(*(arrays[f"{k} of marks, {name}"] for k in range(4)))
         rows = np.split(arrays["prints"], np.cumsum(arrays["sizes"])[:-1])
         self.prints = list(zip(arrays["first"].tolist(), rows, strict=True)) if len(arrays["first"]) else []
+
+    def fingerprints(self) -> tuple[NDArray, NDArray[np.uint64]]:
+        """Path numbers and their fingerprints (paths, series)."""
+        paths = np.concatenate([first + np.arange(len(rows)) for first, rows in self.prints])
+        return paths, np.concatenate([rows for _, rows in self.prints])
 
     def merge(self, other: Structure) -> None:
         for mine, theirs in ((self.not_finite, other.not_finite), (self.off_grid, other.off_grid)):
@@ -200,8 +205,7 @@ class Structure:
 
 
     def _repeats(self) -> Iterator[Check]:
-        paths = np.concatenate([first + np.arange(len(rows)) for first, rows in self.prints])
-        prints = np.concatenate([rows for _, rows in self.prints])
+        paths, prints = self.fingerprints()
         for column, what in enumerate(self.series):
             if what.repeats is not None and what.name in self.runs:
                 run, marks = self.runs[what.name], self.marks[what.name]
@@ -227,26 +231,26 @@ def _equal(prints: NDArray, paths: NDArray) -> tuple[int, int, int]:
 
 
 def _looked(
-    x: NDArray, first_step: int, column: int, prints: NDArray[np.uint64]
+    x: NDArray, first_step: int, prints: NDArray[np.uint64]
 ) -> tuple[bool, tuple[NDArray, NDArray] | None]:
     """Whether all values are finite, and if so, the extremes of each step; their fingerprints are added to `prints`."""
     if compiled(x.shape[1]):
         from procgen.checks import fused
 
         low, high = np.empty((2, len(x)), dtype=np.int64)
-        finite = fused.looked(np.ascontiguousarray(x), _weights(first_step, len(x), column), prints, low, high)
+        finite = fused.looked(np.ascontiguousarray(x), _weights(first_step, len(x)), prints, low, high)
         ends = low.view(float), high.view(float)
     else:
-        prints += fingerprint(x, first_step, column)
+        prints += fingerprint(x, first_step)
         ends = x.min(axis=1), x.max(axis=1)
         finite = bool(np.isfinite(ends).all())
     return finite, ends if finite else None
 
 
-def fingerprint(x: NDArray, first_step: int, column: int) -> NDArray[np.uint64]:
+def fingerprint(x: NDArray, first_step: int) -> NDArray[np.uint64]:
     """A 64-bit sum (paths,) over the bits of a tile (steps, paths): equal for equal paths, and it adds over tiles."""
     bits = np.ascontiguousarray(x, dtype=np.float64).view(np.uint64)
-    weights = _weights(first_step, len(x), column)
+    weights = _weights(first_step, len(x))
     total = np.zeros(x.shape[1], dtype=np.uint64)
     count = max(_AT_ONCE // x.shape[1], 1)
     for start in range(0, len(x), count):
@@ -257,10 +261,10 @@ def fingerprint(x: NDArray, first_step: int, column: int) -> NDArray[np.uint64]:
     return total
 
 
-def _weights(first_step: int, steps: int, column: int) -> NDArray[np.uint64]:
-    """An odd number for each step."""
+def _weights(first_step: int, steps: int) -> NDArray[np.uint64]:
+    """An odd number for each step, the same for all series."""
     step = np.arange(first_step, first_step + steps, dtype=np.uint64)
-    x = step * np.uint64(0x9E3779B97F4A7C15) + np.uint64((column + 1) * 0x632BE59BD9B4E019 % 2**64)
+    x = step * np.uint64(0x9E3779B97F4A7C15) + np.uint64(0x632BE59BD9B4E019)
     x = (x ^ (x >> np.uint64(30))) * np.uint64(0xBF58476D1CE4E5B9)
     x = (x ^ (x >> np.uint64(27))) * np.uint64(0x94D049BB133111EB)
     return (x ^ (x >> np.uint64(31))) | np.uint64(1)

@@ -12,7 +12,7 @@ from typing import Any
 
 import numpy as np
 
-from procgen.checks import farthest, missing
+from procgen.checks import farthest, missing, repeated
 from procgen.checks.atoms import few_shocks, may_stay
 from procgen.checks.copies import repeats_of
 from procgen.checks.extremes import Reach
@@ -160,6 +160,7 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
     whole = Plan(steps, series, precision, plan_cross(series, th.cross), routes, pairs, squares, gaps)
     apart = [p for p in combinations(routes, 2) if p not in pairs and not gaps.keys() & set(p)]
     whole.relations = plan_relations(graph, th, steps, grains, apart)
+    whole.strangers = repeated.strangers(graph, [what.name for what in precision if what.random])
     return missing.adapted(whole, gaps) if gaps else whole
 
 
@@ -194,6 +195,8 @@ def judged(gather: Gather) -> Iterator[Check]:
     plan = gather.plan
     equal = {p.name: _chance_of_equal(p, plan) + missing.chance_of_none(plan, p) for p in plan.series}
     yield from gather.structure.checks(equal)
+    if gather.structure.prints:
+        yield from repeated.checks(plan.strangers, plan.names, *gather.structure.fingerprints(), equal)
     for column, series in enumerate(plan.series):
         yield from missing.checks(gather, series.name)
         if not plan.precision[column].random:

@@ -114,7 +114,7 @@ def test_fingerprints_and_extremes(wrong):
 
     def run():
         prints = np.arange(33, dtype=np.uint64)
-        finite, ends = _looked(x, 640, 2, prints)
+        finite, ends = _looked(x, 640, prints)
         low, high = ends or (None, None)
         return {"prints": prints, "finite": finite, "low": low, "high": high}
 

@@ -42,7 +42,7 @@ def test_paths_that_differ_in_one_bit_are_no_copies():
 def test_whole_numbers_do_not_collide():
     # 20,000 paths of four whole numbers below 4,000: equal prints by chance have probability 1e-11.
     x = np.random.default_rng(2).permutation(20_000 * 4).reshape(20_000, 4).astype(float)
-    assert len(np.unique(fingerprint(x.T, 0, 0))) == 20_000
+    assert len(np.unique(fingerprint(x.T, 0))) == 20_000
 
 
 def test_copies_by_rounding_cannot_be_judged():
