@@ -143,7 +143,8 @@ class Table:
             return self._numbered(column, names.step) if numeric else self._timed(column)
         if names.time is not None:
             return self._timed(frame[names.time])
-        self._say("step order", "no column of steps or times: rows of a path are taken in their order", "reported")
+        none = f"no column of steps or times: rows of a path are taken in their order; else {option('step')}"
+        self._say("step order", none, "reported")
         order = np.argsort(path, kind="stable")
         starts = np.searchsorted(path[order], np.arange(len(self.labels)))
         step = np.empty(len(path), dtype=np.int64)
@@ -278,9 +279,12 @@ def _cell(column: pd.Series, row: int) -> str:
 
 
 def _absent_steps(steps: int, stated: int) -> str:
-    """What is said where the last steps of a spec are in no path of a table."""
-    if steps >= stated:
+    """What is said where the last steps of a spec are in no path of a table, or a table has more of them."""
+    if steps == stated:
         return ""
+    if steps > stated:
+        more = f"step {stated} is" if steps == stated + 1 else f"steps {stated}–{steps - 1} are"
+        return f"{more} beyond the {many(stated, 'step')} of the spec; judged on all {steps:,}"
     last = f"step {steps} is" if steps == stated - 1 else f"steps {steps}–{stated - 1} are"
     return f"{last} absent; judged on {many(steps, 'step')}"
 

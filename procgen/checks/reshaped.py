@@ -25,8 +25,11 @@ def recognised(found: list[str], spec: Any, columns: Mapping[str, str] | None, w
     given = {k: v for k, v in (columns or {}).items() if v is not None}
     for role in given:
         if role not in (*INDEX, *spec.series):
-            known = ", ".join([*INDEX, *spec.series])
-            raise TableError(f"expected one of {known} to be mapped, got {role!r}")
+            of = f" of {spec.title!r}" if spec.title else ""
+            raise TableError(
+                f"expected a series of the spec{of}, one of {', '.join(spec.series)}, or one of {', '.join(INDEX)}, "
+                f"got {role!r}; name the column of a series with --series-col SERIES=NAME (columns={{SERIES: NAME}})"
+            )
     roles = {role for role in ("id", "value") if role not in spec.series}  # else it is a series of that name
     if roles & given.keys():
         return Panel(found, spec, given, where)

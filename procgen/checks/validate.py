@@ -7,6 +7,7 @@ import re
 from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
 from functools import partial
 from itertools import combinations
+from numbers import Real
 from pathlib import Path
 from typing import Any
 
@@ -79,8 +80,12 @@ def validate(
     """
     from procgen.checks import source
 
-    if not 0 < false_alarm < 1:
-        raise ValueError(f"expected a false-alarm probability between 0 and 1, got {false_alarm}")
+    if isinstance(false_alarm, bool) or not isinstance(false_alarm, Real) or not 0 < false_alarm < 1:
+        raise ValueError(f"expected false_alarm to be a probability between 0 and 1, got {false_alarm!r}")
+    if columns is not None and not isinstance(columns, Mapping):
+        raise TypeError(
+            f'expected columns to be a mapping such as {{"path": "run", "x": "value"}}, got {columns!r}'
+        )
     if workers is not None and (isinstance(workers, bool) or not isinstance(workers, int) or workers < 1):
         raise ValueError(f"expected workers to be a whole number of at least 1, got {workers!r}")
     origin = source.origin(data, spec, columns)

@@ -142,7 +142,7 @@ def test_text_and_empty_cells_are_named(frame, tmp_path):
         (lambda f: f, {"path": "run"}, "no column 'run' for path.*with --path-col NAME"),
         (lambda f: f, {"step": "hour"}, "no column 'hour' for step.*with --step-col NAME"),
         (lambda f: f, {"time": "at"}, "no column 'at' for time.*with --time-col NAME"),
-        (lambda f: f, {"z": "x"}, "expected one of path, step, time, id, value, x, y to be mapped, got 'z'"),
+        (lambda f: f, {"z": "x"}, "expected a series of the spec, one of x, y, or one of path, .*, got 'z'"),
         (lambda f: f.assign(step=f["step"] * 1000), None, "is the right column taken for the step.*--step-col NAME"),
         (lambda f: f.assign(step=f["step"] + 0.5), None, "whole steps in step, got 0.5 in row 0; .*--step-col"),
         (lambda f: f.assign(step=f["step"] - 3), None, "expected steps from 0 on in step, got -3"),
@@ -207,6 +207,22 @@ def test_a_column_of_no_numbers_is_refused(frame, spoil, said):
     with pytest.raises(TableError) as error:
         validate(frame.assign(x=spoil(frame.x)), SPEC)
     assert said in str(error.value)
+
+
+def test_an_argument_of_another_kind_is_told(frame):
+    with pytest.raises(TypeError, match=r'expected columns to be a mapping such as .*, got .x.'):
+        validate(frame, SPEC, columns="x")
+    with pytest.raises(ValueError, match="expected false_alarm to be a probability between 0 and 1, got 'a'"):
+        validate(frame, SPEC, false_alarm="a")
+    with pytest.raises(TableError, match=r"expected a series of the spec, one of x, y, or .*, got 'z'.*--series-col"):
+        validate(frame, SPEC, columns={"z": "x"})
+
+
+def test_order_of_rows_and_steps_beyond_the_spec_are_told(frame):
+    ordered = " ".join(validate(frame.drop(columns="step"), SPEC).to_text().split())
+    assert "rows of a path are taken in their order; else name the right one with --step-col" in ordered
+    spec = read_spec({**RAW, "time": {**RAW["time"], "steps": 40}})
+    assert validate(frame, spec).title.endswith(" (steps 40–59 are beyond the 40 steps of the spec; judged on all 60)")
 
 
 def test_complex_numbers_are_refused(frame):
