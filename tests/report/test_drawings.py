@@ -3,6 +3,7 @@
 import re
 
 import numpy as np
+import pandas as pd
 import pytest
 from scipy import stats
 
@@ -217,3 +218,50 @@ def test_a_fan_shows_the_record_that_it_leaves_from():
     (line,) = [mark for mark in fan.marks if isinstance(mark, Line) and mark.label == "recorded before step 0"]
     assert np.array_equal(line.x, [-4, -3, -2, -1]) and np.array_equal(line.y, record)
     assert fan.x.low == -4 and fan.y.low < 71.0
+
+
+def test_points_off_a_quantile_plot_are_called_too_few_only_where_they_are():
+    """One sample is drawn as stated, and the same one twice as wide."""
+    import procgen as pg
+    from procgen.report.pictures.gallery import of_verdict
+
+    spec = {"procgen": 1, "seed": 3, "paths": 200, "time": {"steps": 20}, "series": {"x": [{"white_noise": {"sd": 1}}]}}
+    values = np.random.default_rng(2).normal(size=(200, 20))
+    paths, steps = np.indices(values.shape).reshape(2, -1)
+    for times, few in ((1.0, False), (2.0, True)):
+        table = pd.DataFrame({"path": paths, "step": steps, "x": times * values.ravel()})
+        (section,) = of_verdict(pg.validate(table, spec)).sections
+        (caption,) = [chart.caption for chart in section.charts if chart.title.startswith("Quantiles")]
+        assert "or more do in 99 of 100 samples" in caption and ("too few: " in caption) is few, caption
+
+
+def test_parts_of_a_path_stand_under_a_heading_of_their_own():
+    import procgen as pg
+    from procgen.report.pictures.gallery import of_spec_alone
+
+    head = {"procgen": 1, "seed": 3, "paths": 30, "time": {"steps": 40}}
+    body = [{"white_noise": {"sd": 1}}, {"trend": {"level": 1, "slope": 0.1}}]
+    one, two = (pg.load(head | {"series": {name: body for name in names}}) for names in ("x", "xy"))
+    assert of_spec_alone(one).groups[-1][0] == "Within a path"
+    assert of_spec_alone(two).groups[-1][0] == "Between series and within a path"
+
+
+def test_the_key_of_a_png_covers_no_mark(flow):
+    """It stands above the axes, as matplotlib lays it out."""
+    pytest.importorskip("matplotlib")
+    from matplotlib.backends.backend_agg import FigureCanvasAgg
+    from matplotlib.figure import Figure
+
+    from procgen.report.pictures.png import _drawn
+
+    keys = 0
+    for chart in flow[1].values():
+        sheet = Figure(figsize=(5.6, 3.9), layout="constrained")
+        FigureCanvasAgg(sheet)
+        axes = sheet.add_subplot()
+        _drawn(axes, "flow", chart)
+        sheet.canvas.draw()
+        key = axes.get_legend()
+        keys += key is not None
+        assert key is None or key.get_window_extent().y0 >= axes.get_window_extent().y1 - 1.0
+    assert keys > 3

@@ -107,6 +107,18 @@ def test_ranks_of_uniforms_by_the_binomial():
     assert np.all(np.diff(values) >= 0)
 
 
+@pytest.mark.parametrize("n", [30, 400])
+def test_how_few_ranks_lie_within_their_chances_is_that_of_sorted_uniforms(n):
+    """Beside samples that are drawn and sorted: about 1 in 100 has fewer within."""
+    ranks, _ = seen.ordered(np.arange(float(n)))
+    least = seen.fewest_inside(ranks, n)
+    _, low, high = seen.rank_chances(ranks, n)
+    u = np.sort(np.random.default_rng(5).random((4000, n)), axis=1)[:, ranks - 1]
+    inside = ((u >= low) & (u <= high)).sum(axis=1)
+    assert (inside < least).mean() < 0.018 and (inside <= least + 3).mean() > 0.005
+    assert inside.mean() == pytest.approx(0.95 * len(ranks), rel=0.02)
+
+
 def test_correlations_across_paths_are_those_of_scipy():
     x = ar(0.5, 30, 10)
     value, used = seen.across(x[:, 2], x[:, 2:6])

@@ -24,6 +24,7 @@ BUCKETS = 160  # points of a longer range
 LOOKS = 8  # steps of a bucket at which its bands are taken
 PATHS, FEW = 4, 12  # paths that are drawn beside curves of the sample, and without them
 CURVES = 50  # paths from which their quantiles make a curve
+PARTS = "Parts of one path"
 MOST_PARTS = 8
 
 
@@ -127,7 +128,7 @@ def strips(sample: Sample) -> Chart | None:
     )
     x, y = step_axis(sample.spec.time, 0, steps - 1), Axis(0.0, float(len(names)), ())
     head = ("part", "lowest", "mean", "highest")
-    return Chart("Parts of one path", caption, x, y, marks, head, rows[::-1], high=6.0 + 5.0 * len(names))
+    return Chart(PARTS, caption, x, y, marks, head, rows[::-1], high=6.0 + 5.0 * len(names))
 
 
 def _states(spec: Any, names: Sequence[str]) -> dict[str, tuple[str, ...]]:

@@ -46,7 +46,14 @@ class Gallery:
     def groups(self) -> list[tuple[str, Sequence[Chart]]]:
         """Heading and charts, for what knows no more than that."""
         found: list[tuple[str, Sequence[Chart]]] = [(s.subject.called, s.charts) for s in self.sections]
-        return found + ([("Between series", self.shared)] if self.shared else [])
+        return found + ([(self.heading, self.shared)] if self.shared else [])
+
+    @property
+    def heading(self) -> str:
+        """What the charts that are of no series alone show."""
+        parts = any(chart.title == fans.PARTS for chart in self.shared)
+        kinds = ["between series"] * (len(self.shared) > parts) + ["within a path"] * parts
+        return " and ".join(kinds).capitalize()
 
 
 def of_verdict(verdict: Verdict) -> Gallery | None:

@@ -11,6 +11,7 @@ from procgen.checks.words import number
 from procgen.report.pictures.chart import Axis, Band, Chart, Dots, Line, Mark, bars
 from procgen.report.pictures.seen import (
     ENOUGH,
+    fewest_inside,
     grain_of,
     histogram,
     ordered,
@@ -133,7 +134,12 @@ def quantile_plot(subject: Subject) -> Chart | None:
     elif look.independent:
         room = subject.grain / 2
         inside = (found >= low - room) & (found <= high + room)
-        caption = f"{share(inside)} points shown lie within what chance allows each of them ({look.where})"
+        least = fewest_inside(ranks, n)
+        few = "too few: " if inside.sum() < least else ""
+        caption = (
+            f"{share(inside)} points shown lie within what chance allows each of them ({look.where}); {few}{least} or "
+            "more do in 99 of 100 samples, for neighbours move together"
+        )
     y = axis(float(min(found.min(), middle.min())), float(max(found.max(), middle.max())), most=5, room=0.03)
     counted = "stated quantile" if name == "stated" else "quantile of a normal law"
     x = axis(float(middle.min()), float(middle.max()), counted + look.unit, room=0.03)

@@ -36,9 +36,7 @@ def series(gallery: Gallery, found: dict[str, Sequence[str]]) -> Iterator[str]:
         yield from figures(section.charts, f"s{place}")
         yield "</section>"
     if gallery.shared:
-        yield '<section id="between"><h2>'
-        yield "Between series and within a path" if gallery.sample.parts else "Between series"
-        yield "</h2>"
+        yield f'<section id="between"><h2>{gallery.heading}</h2>'
         yield from figures(gallery.shared, "b")
         yield "</section>"
 

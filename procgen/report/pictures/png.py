@@ -19,6 +19,7 @@ WIDE, HIGH, DPI = 5.6, 3.9, 110
 _INK = {"stated": LIGHT["stated"], "seen": LIGHT["ink"], "path": LIGHT["path"], "chance": LIGHT["ink"]}
 _INK["compare"] = _INK["stated"]
 _SIDES = {"start": "left", "middle": "center", "end": "right"}
+_LINE, _LETTERS = 10.5, 112  # of a line of the key: points high, letters wide
 _WIDTH = {"stated": 1.6, "seen": 1.2, "path": 0.7, "compare": 1.2}
 
 
@@ -67,11 +68,24 @@ def _drawn(axes: Any, heading: str, chart: Chart) -> None:
     if chart.grid:
         axes.grid(axis="y", color=LIGHT["grid"], linewidth=0.7)
     axes.set_axisbelow(True)
-    axes.set_title(_plain(f"{heading}: {chart.title}"), fontsize=9, fontweight="bold", loc="left")
+    above = _key(axes) if chart.key else 0
+    title = _plain(f"{heading}: {chart.title}")
+    axes.set_title(title, fontsize=9, fontweight="bold", loc="left", pad=6.0 + _LINE * above)
     label = f"{chart.x.label}\n" if chart.x.label else ""
     axes.set_xlabel(_plain(label + fill(chart.caption, 92)), fontsize=7.5, loc="left", color=LIGHT["soft"])
-    if chart.key:
-        axes.legend(fontsize=7, framealpha=0.85, edgecolor="none", loc="best")
+
+
+def _key(axes: Any) -> int:
+    """What the marks are, above them, where it covers none; how many lines it takes."""
+    handles, labels = axes.get_legend_handles_labels()
+    if not labels:
+        return 0
+    beside = max(1, min(len(labels), _LETTERS // (max(map(len, labels)) + 6)))
+    axes.legend(
+        handles, labels, fontsize=7, frameon=False, loc="lower left", bbox_to_anchor=(0.0, 1.0), ncols=beside,
+        borderpad=0.2, borderaxespad=0.1, labelspacing=0.3,
+    )  # fmt: skip
+    return -(-len(labels) // beside)
 
 
 def _mark(axes: Any, mark: Mark) -> None:
