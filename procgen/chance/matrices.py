@@ -20,14 +20,16 @@ def matmul(a: np.ndarray, b: np.ndarray) -> np.ndarray:
 
 
 def cholesky(s: np.ndarray) -> np.ndarray:
-    """Lower L with L L' = s, for a symmetric positive semidefinite s of shape (n, n).
+    """Lower L with L L' = s, for a symmetric positive semidefinite s of shape (n, n), or many of them (..., n, n).
 
     A pivot that is zero but for rounding gives a zero column: what it stands for is determined by the ones before.
     ValueError when a pivot is clearly negative.
     """
     rest = np.array(s, np.float64)
-    if rest.ndim != 2 or rest.shape[0] != rest.shape[1]:
+    if rest.ndim < 2 or rest.shape[-2] != rest.shape[-1]:
         raise ValueError(f"expected a square matrix, got shape {rest.shape}")
+    if rest.ndim > 2:
+        return _factors(rest)
     size = len(rest)
     bounds = _ROUNDING * size * np.abs(np.diagonal(rest))
     lower = np.zeros_like(rest)
@@ -43,6 +45,23 @@ def cholesky(s: np.ndarray) -> np.ndarray:
         column = rest[j:, j] / np.sqrt(pivot)
         lower[j:, j] = column
         rest[j:, j:] -= column[:, None] * column[None, :]
+    return lower
+
+
+def _factors(rest: np.ndarray) -> np.ndarray:
+    """`cholesky` of many matrices, each by the same operations; `rest` is used up."""
+    size = rest.shape[-1]
+    bounds = _ROUNDING * size * np.abs(np.diagonal(rest, axis1=-2, axis2=-1))
+    lower = np.zeros_like(rest)
+    for j in range(size):
+        pivot = rest[..., j, j].copy()
+        if not np.all(pivot >= -(2.0**20) * bounds[..., j]):
+            raise ValueError(f"expected positive semidefinite matrices, got a pivot of {pivot.min():.3g} in row {j}")
+        sound = pivot > bounds[..., j]
+        root = np.sqrt(np.where(sound, pivot, 1.0))
+        column = np.where(sound[..., None], rest[..., j:, j] / root[..., None], 0.0)
+        lower[..., j:, j] = column
+        rest[..., j:, j:] -= column[..., :, None] * column[..., None, :]
     return lower
 
 

@@ -10,6 +10,7 @@ import numpy as np
 from procgen.chance.kernel import kernel
 from procgen.spec.declare import Parameter, Reals, Record
 from procgen.terms.base import LAW, SD, TOTAL_SD, Ahead, Term, Unknown, number, rows, signed, stated, without_gap
+from procgen.terms.rows import Unlike, alike, plain, row_in
 from procgen.terms.start import JointStart, Member, companion, decay_length, partial_autocorrelations
 
 FORGOTTEN = 1e-9
@@ -71,6 +72,7 @@ class Arma(Term):
     knows = "mean, autocovariance at any lag; marginal law when Gaussian"
     takes_shock = True
     by_rows = ("phi", "theta", "sd", "total_sd")
+    begins_by_rows = True
     parameters: ClassVar[tuple[Parameter, ...]] = (
         Parameter("phi", "φ", Reals(), "coefficients of x[t−1], x[t−2], …"),
         Parameter("theta", "θ", Reals(), "coefficients of a[t−1], a[t−2], …"),
@@ -113,7 +115,8 @@ class Arma(Term):
             yield "phi", not_causal(phi, "put the term without that root inside `integrate`")
 
     def __init__(self, values):
-        super().__init__({"phi": (), "theta": (), **values})
+        coefficients = {name: alike(values.get(name, ())) for name in ("phi", "theta")}
+        super().__init__({**values, **coefficients})
 
     def _member(self, sd=1.0):
         return Member(self.phi, self.theta, sd)
@@ -121,7 +124,7 @@ class Arma(Term):
     def shock_sd(self):
         if self.sd is not None:
             return self.sd
-        return self.total_sd / float(np.sqrt(JointStart([self._member()], np.ones((1, 1))).variance()))
+        return self.total_sd / plain(np.sqrt(JointStart([self._member()], np.ones((1, 1))).variance()))
 
     def stationary(self):
         """The filter as a member of a joint start; None where it leaves from a given past."""
@@ -136,6 +139,8 @@ class Arma(Term):
 
     @cached_property
     def _memory(self):
+        if row_in(self.phi):
+            raise Unlike("each path has a burn-in of its own")
         return decay_length(companion(self.phi, (), len(self.phi), 0)[0])
 
     def reach(self, head):

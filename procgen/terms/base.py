@@ -98,6 +98,7 @@ class Term:
     outputs: ClassVar[tuple[str, ...]] = ()
     correlates: ClassVar[bool] = False  # whether its first draw may be named in `correlation`, as those of a noise may
     by_rows: ClassVar[tuple[str, ...]] = ()  # parameters that may be rows, one value a path, in `recurse`
+    begins_by_rows: ClassVar[bool] = False  # whether `begin`, and what a graph asks before, take such rows too
     finer: ClassVar[str] = ""  # the parameter that says in how many parts its body cuts a step; empty where none does
     compiles: bool = False  # whether many paths side by side are drawn quicker where kernels are compiled
     burns_in: ClassVar[bool] = False  # whether `begin` reads its inputs from the first row on, a few rows at a time

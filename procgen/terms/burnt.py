@@ -28,18 +28,30 @@ def can_burn_together(stack: Any, nodes: Sequence[Node]) -> bool:
     )
 
 
-def burnt_together(
+def burnt_by_nodes(
     stack: Any, nodes: Sequence[Node], draw: Callable[[int, int], Array]
 ) -> tuple[dict[str, Array] | None, State]:
-    """Values at the steps before step 0 that somebody reads, by output, and the state of all paths after them.
+    """`burnt` of the term that a stack of nodes runs as."""
+    head = nodes[0].head
+    lengths = np.repeat([node.term.reach(head)[0] for node in nodes], np.diff(stack.edges))
+    return burnt(stack.one, lengths, stack.gathered([node.term.rest() for node in nodes]), head, draw)
 
-    draw(first_step, steps) gives the shocks of all paths.
+
+def burnt(
+    term: Any, lengths: Array, rest: State, head: int, draw: Callable[[int, int], Array]
+) -> tuple[dict[str, Array] | None, State]:
+    """Values at the `head` steps before step 0, by output, and the state of all paths after them.
+
+    Parameters
+    ----------
+    term : whose numbers are rows, one value a path
+    lengths : (paths,), the steps of each burn-in, at least `head`
+    rest : the state that they begin from, each (n, paths)
+    draw : draw(first_step, steps) gives the shocks of all paths
     """
-    widths, head = np.diff(stack.edges), nodes[0].head
-    lengths = np.repeat([node.term.reach(head)[0] for node in nodes], widths)
     order = np.argsort(-lengths, kind="stable")
-    rest = {name: rows[:, order] for name, rows in stack.gathered([node.term.rest() for node in nodes]).items()}
-    term, sorted_lengths = chosen(stack.one, order, len(order)), lengths[order]
+    rest = {name: rows[:, order] for name, rows in rest.items()}
+    term, sorted_lengths = chosen(term, order, len(order)), lengths[order]
     state, joined, active, kept = {name: rows[:, :0] for name, rows in rest.items()}, 0, term, []
     for first in range(-int(sorted_lengths[0]), 0, BURN_TILE):
         end = min(first + BURN_TILE, 0)

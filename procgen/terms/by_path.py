@@ -1,6 +1,7 @@
 """Values of a spec whose parameters vary by path: each path is that of a spec with its values in place.
 
-Paths begin one by one, each from the graph of its own spec, and then run side by side (`stack`).
+Where all terms with such values begin and run by rows, one graph has the values of all paths in it. Otherwise paths
+begin one by one, each from the graph of its own spec, and then run side by side (`stack`).
 """
 
 from __future__ import annotations
@@ -14,10 +15,15 @@ from typing import Any
 import numpy as np
 
 from procgen.chance.streams import Stream
+from procgen.spec.entries import walk
+from procgen.spec.model import Entry, Series, Shared
+from procgen.terms import catalogue
 from procgen.terms.base import Array, Node, State
-from procgen.terms.burnt import burnt_together, can_burn_together
+from procgen.terms.burnt import burnt, burnt_by_nodes, can_burn_together
 from procgen.terms.combine import Hidden
+from procgen.terms.conditional import Conditional
 from procgen.terms.graph import Graph, Source
+from procgen.terms.rows import Unlike, row_in
 from procgen.terms.run import Run
 from procgen.terms.stack import Stack
 from procgen.terms.varied import Varied
@@ -81,6 +87,48 @@ class PartRun(Run):
             values[id(member)] = self._of_whole(rows)
 
 
+class RowRun(Run):
+    """The run of a graph whose numbers are rows, one value a path."""
+
+    def _begin_node(self, node: Node) -> None:
+        term = node.term
+        if not (isinstance(term, Conditional) and row_in(term.values) and term.before is None):
+            super()._begin_node(node)
+            return
+        shocks, rest = self._begun[id(node.inputs[0])], np.zeros(self.paths)
+        values, self._states[node.key] = burnt(
+            term,
+            np.maximum(np.array(term.burns), node.head),
+            {name: rows + rest for name, rows in term.rest().items()},
+            node.head,
+            lambda first, steps: shocks[len(shocks) + first : len(shocks) + first + steps],
+        )
+        for name, rows in (values or {}).items():
+            self._begun[id(node) if name == "" else (id(node), name)] = rows
+
+
+def graph_by_rows(varied: Varied, rows: dict[str, Array]) -> Graph | None:
+    """The graph with rows in the place of what varies; None where some term must begin path by path."""
+    spec = varied.at({name: row.astype(np.float64) for name, row in rows.items()})
+    bodies: list[Series | Shared] = [*spec.shared.values(), *spec.series.values()]
+    if not all(_takes_rows(entry) for body in bodies for entry, _ in walk(body.of)):
+        return None
+    try:
+        return Graph(spec, factors=True)
+    except Unlike:
+        return None
+
+
+def _takes_rows(entry: Entry) -> bool:
+    """Whether the term of an entry begins and runs with the rows that stand in it, and in its shock."""
+    shock = entry.shock is not None and any(row_in(below.values) for below, _ in walk((entry.shock,)))
+    names = {name for name, value in entry.values.items() if row_in(value)}
+    if not names and not shock:
+        return True
+    kind = catalogue()[entry.kind]
+    return kind.begins_by_rows and names <= set(kind.by_rows)
+
+
 class ByPath:
     """A `Run` of a spec whose parameters vary by path; what it answers, and when, is the same."""
 
@@ -91,6 +139,12 @@ class ByPath:
         self._drawn: dict[Any, Any] = {}  # what lies before step 0, of all paths
         changes = np.any(np.diff(np.array([*self._rows.values()]), axis=1) != 0.0, axis=0)
         self._edges = [0, *(np.flatnonzero(changes) + 1).tolist(), paths]
+        self._runs: list[PartRun] = []
+        self._nodes: list[tuple[Node, list[Node]]] = []
+        together = graph_by_rows(self._varied, self._rows) if len(self._edges) > 2 else None
+        if together is not None:
+            self._whole: Run = RowRun(together, first_path, paths, reveal)
+            return
         self._whole = Run(self._make(0), first_path, paths, reveal)
         with uncollected():
             self._runs = [self._run(start, end) for start, end in pairwise(self._edges)]
@@ -140,7 +194,7 @@ class ByPath:
             self._whole._draw(source, first_step, steps, drawn)
             return drawn[id(source)]
 
-        return burnt_together(node.term, nodes, draw)
+        return burnt_by_nodes(node.term, nodes, draw)
 
     def tile(self, steps: int) -> dict[str, Array]:
         """The next `steps` steps of every series: name to float64 (steps, paths)."""

@@ -58,6 +58,7 @@ class Scaled(Term):
     """A factor on a body, from `times:`; not a kind of its own."""
 
     by_rows = ("factor",)
+    begins_by_rows = True
 
     def __init__(self, factor):
         super().__init__({"factor": factor})

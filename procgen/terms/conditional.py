@@ -3,12 +3,14 @@
 from __future__ import annotations
 
 import math
+from functools import cached_property
 from typing import ClassVar
 
 import numpy as np
 
 from procgen.spec.declare import Flag, Parameter, Real, Reals, Record
 from procgen.terms.base import Draw, Term, rows, stated
+from procgen.terms.rows import each_path
 
 FORGOTTEN = 1e-9
 BURN_TILE = 128  # steps of a burn-in drawn at once, few enough to stay in cache
@@ -68,7 +70,12 @@ class Conditional(Term):
         return None if self.before is None else min(len(self.before["shocks"]), len(self.before["variance"]))
 
     def reach(self, head):
-        return (max(0 if self.before is not None else self.burn(), head),)
+        return (max(0 if self.before is not None else max(self.burns), head),)
+
+    @cached_property
+    def burns(self):
+        """`burn` of every path where numbers are rows, and of all paths otherwise."""
+        return [term.burn() for term in each_path(self)]
 
     def begin(self, before):
         if self.before is not None:

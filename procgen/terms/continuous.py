@@ -14,6 +14,7 @@ from procgen.terms.arima import Integrated
 from procgen.terms.arma import Arma
 from procgen.terms.base import LAW, TOTAL_SD, number, signed, stated, without_gap
 from procgen.terms.noise import WhiteNoise
+from procgen.terms.rows import plain
 
 
 @kernel
@@ -114,6 +115,7 @@ class OrnsteinUhlenbeck(Integrated):
     )
 
     by_rows = ("rate", "mean", "sd", "total_sd")
+    begins_by_rows = True
 
     @classmethod
     def check(cls, values):
@@ -127,7 +129,7 @@ class OrnsteinUhlenbeck(Integrated):
         self.even = self.clock == "steps"
         steady = {"phi": (_kept(self.rate),), "sd": 1.0, "total_sd": None, "before": None}
         self.core = Arma(steady) if self.even else Timed(self.rate, self.clock)
-        self.level = float(self.values["mean"])
+        self.level = plain(self.values["mean"])
 
     def misfit(self, inputs):
         noise = inputs[-1].term
@@ -139,10 +141,10 @@ class OrnsteinUhlenbeck(Integrated):
         return None
 
     def shock_sd(self):
-        share = float(lost(2.0 * self.rate))  # 1 − φ²
+        share = plain(lost(2.0 * self.rate))  # 1 − φ²
         if self.sd is not None:
-            return self.sd * float(np.sqrt(share / (2.0 * self.rate)))
-        return self.total_sd * float(np.sqrt(share))
+            return self.sd * plain(np.sqrt(share / (2.0 * self.rate)))
+        return self.total_sd * plain(np.sqrt(share))
 
     def path(self, steps, drifting=False):
         """The mean, at any steps."""
@@ -171,4 +173,4 @@ class OrnsteinUhlenbeck(Integrated):
 
 def _kept(rate):
     """exp(−rate), the share of a distance that is left after a step."""
-    return float(exp(np.array([-rate]))[0])
+    return plain(exp(np.array([-rate]))[0])

@@ -10,6 +10,7 @@ from procgen.chance.kernel import kernel
 from procgen.spec.declare import Parameter, Reals, Record
 from procgen.terms.base import LAW, Ahead, number, rows, signed, stated, without_gap
 from procgen.terms.conditional import FORGOTTEN, INFINITE, OMEGA, SD, Conditional, burn_without_variance
+from procgen.terms.rows import alike, plain
 from procgen.terms.start import companion, decay_length
 
 
@@ -71,6 +72,7 @@ class Garch(Conditional):
     source = "Bollerslev (1986); arch is its case without beta (Engle 1982); stationarity: Nelson (1990)"
     example = "garch: {sd: 6.3, alpha: 0.1, beta: 0.85}"
     by_rows = ("omega", "sd", "alpha", "beta")
+    begins_by_rows = True
     parameters: ClassVar[tuple[Parameter, ...]] = (OMEGA, SD, ALPHA, BETA, LAW, INFINITE, BEFORE)
 
     @classmethod
@@ -99,7 +101,7 @@ class Garch(Conditional):
                 )
 
     def __init__(self, values):
-        super().__init__({"beta": (), **values})
+        super().__init__({**values, **{name: alike(values.get(name, ())) for name in ("alpha", "beta")}})
 
     def level(self):
         """ω: as given, or from the unconditional standard deviation."""
@@ -110,13 +112,12 @@ class Garch(Conditional):
     def resting(self):
         """The variance to begin from: the unconditional one; ω/(1 − Σβ) where there is none."""
         rest = 1.0 - _sum(self.alpha) - _sum(self.beta)
-        if rest <= 0.0:
-            rest = max(1.0 - _sum(self.beta), 2.0**-20)
-        return self.level() / rest
+        least = np.maximum(1.0 - _sum(self.beta), 2.0**-20)
+        return self.level() / plain(np.where(rest > 0.0, rest, least))
 
     def scale(self):
         """Unconditional standard deviation, in the series' unit."""
-        return float(np.sqrt(self.resting()))
+        return plain(np.sqrt(self.resting()))
 
     def past(self):
         return None if self.before is None else len(self.before["shocks"])
@@ -137,7 +138,7 @@ class Garch(Conditional):
     def rest(self):
         """The state to begin from: variances and squares at the unconditional variance."""
         shape = {"square": len(self.alpha), "h": len(self.beta)}
-        return {name: np.full((count, 1), self.resting()) for name, count in shape.items()}
+        return {name: np.zeros((count, 1)) + self.resting() for name, count in shape.items()}
 
     def left(self):
         """The state just before step 0 that `before` states."""

@@ -163,7 +163,7 @@ class Graph:
     def _entry(self, entry: Entry, owner: str) -> Node:
         if id(entry) not in self._entries:
             node = self._unscaled(entry, owner)
-            if entry.times != 1.0 or self._factors:
+            if self._factors or entry.times != 1.0:
                 node = self._node(Scaled(entry.times), node.name, [node], entry.place, node.pace)
             self._entries[id(entry)] = node
         return self._entries[id(entry)]

@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+from functools import cached_property
 from itertools import pairwise
 
 import numpy as np
 
 from procgen.spec.declare import Moment, Parameter, Real, Records
 from procgen.terms.base import Ahead, Array, Term, number, signed
+from procgen.terms.rows import row_in
 from procgen.terms.support import finite
 
 
@@ -19,10 +21,18 @@ class Known(Term):
         raise NotImplementedError
 
     def begin(self, before):
-        return self.at(np.arange(-before.head, 0))[:, None], {}
+        return self._column(np.arange(-before.head, 0)), {}
 
     def recurse(self, inputs, state, at):
-        return self.at(at)[:, None], state
+        return self._column(at), state
+
+    def _column(self, steps):
+        """Values at steps, (steps, 1), or (steps, paths) where numbers are rows."""
+        return self.at(steps[:, None]) if self._by_path else self.at(steps)[:, None]
+
+    @cached_property
+    def _by_path(self):
+        return bool(self.by_rows and row_in(self.values))
 
     def ahead(self, steps, state, *inputs):
         mean = self.at(steps)[:, None]
@@ -40,10 +50,12 @@ class Constant(Known):
     example = "constant: 12.5"
     knows = "mean; no variance"
     short = "level"
+    by_rows = ("level",)
+    begins_by_rows = True
     parameters = (Parameter("level", "c", Real(), "the value", unit="series"),)
 
     def at(self, steps):
-        return np.full(steps.shape, float(self.level))
+        return np.full(np.broadcast_shapes(steps.shape, np.shape(self.level)), self.level, dtype=np.float64)
 
     def equation(self, *inputs):
         return f"x[t] = {number(self.level)}"
@@ -62,6 +74,8 @@ class Trend(Known):
     source = "common practice, no source"
     example = "trend: {level: 310, slope: 0.02, bends: [{at: 500, slope: -0.01}]}"
     knows = "mean; no variance"
+    by_rows = ("level", "slope", "quadratic", "bends")
+    begins_by_rows = True
     parameters = (
         Parameter("level", "c", Real(), "value at step 0", default=0.0, unit="series"),
         Parameter("slope", "b", Real(), "change a step", default=0.0, unit="series", per="rate"),

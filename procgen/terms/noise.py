@@ -18,6 +18,7 @@ class WhiteNoise(Term):
     knows = "everything: white, strictly stationary, independent"
     noise = True
     by_rows = ("sd", "spread")
+    begins_by_rows = True
     parameters = (
         Parameter("sd", "σ", Real(above=0), "standard deviation", default=None, unit="series", per="diffusion"),
         Parameter(

@@ -17,6 +17,8 @@ class Seasonal(Known):
     source = "common practice, no source"
     example = "seasonal: {period: 24, harmonics: [{amplitude: 42, peak: 18}, {amplitude: 9}]}"
     knows = "mean; no variance"
+    by_rows = ("harmonics",)
+    begins_by_rows = True
     parameters = (
         Parameter("period", "P", Span(), "length of one cycle", unit="steps"),
         Parameter(

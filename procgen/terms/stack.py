@@ -9,15 +9,13 @@ from __future__ import annotations
 
 import copy
 from collections.abc import Mapping, Sequence
+from functools import cached_property
 from typing import Any
 
 import numpy as np
 
 from procgen.terms.base import Array, State, Term
-
-
-class Unlike(Exception):
-    """Things of several paths that are not made alike."""
+from procgen.terms.rows import Unlike, alike
 
 
 def stacked(parts: Sequence[Any]) -> Any:
@@ -32,24 +30,20 @@ def stacked(parts: Sequence[Any]) -> Any:
     if all(isinstance(part, float) for part in parts):
         return first if all(part == first for part in parts) else np.array(parts)
     if isinstance(first, tuple) and len({len(part) for part in parts}) == 1:
-        return _alike(tuple([stacked(each) for each in zip(*parts, strict=True)]), len(parts))
+        return alike(tuple([stacked(each) for each in zip(*parts, strict=True)]))
     if isinstance(first, Mapping) and all(part.keys() == first.keys() for part in parts):
         return {key: stacked([part[key] for part in parts]) for key in first}
     if isinstance(first, Term) and all(type(part) is type(first) for part in parts):
         made = copy.copy(first)
         for name in first.__dict__:
-            made.__dict__[name] = stacked([part.__dict__[name] for part in parts])
+            if not isinstance(getattr(type(first), name, None), cached_property):  # these follow from the others
+                made.__dict__[name] = stacked([part.__dict__[name] for part in parts])
+            else:
+                made.__dict__.pop(name, None)
         return made
     if all(part == first for part in parts):
         return first
     raise Unlike
-
-
-def _alike(row: tuple, count: int) -> tuple:
-    """Numbers beside rows become rows too, so that an array of all of them has one row each."""
-    if not any(isinstance(part, np.ndarray) for part in row):
-        return row
-    return tuple([np.full(count, part) if isinstance(part, float) else part for part in row])
 
 
 class Stack(Term):

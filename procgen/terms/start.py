@@ -14,10 +14,12 @@ from __future__ import annotations
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from functools import cached_property
+from typing import Any
 
 import numpy as np
 
 from procgen.chance.portable import cholesky, matmul
+from procgen.terms.rows import Unlike, plain, row_in
 
 Array = np.ndarray
 NEGLIGIBLE = 1e-12
@@ -86,15 +88,20 @@ class Predictors:
 
 
 def companion(phi: Sequence[float], theta: Sequence[float], depth_x: int, depth_a: int) -> tuple[Array, Array]:
-    """Transition A and shock loading b of m = (x lags, a lags): m[t] = A m[t−1] + b a[t]."""
-    n = depth_x + depth_a
-    a, b = np.zeros((n, n)), np.zeros(n)
-    a[0, : len(phi)] = phi
-    a[0, depth_x : depth_x + len(theta)] = theta
+    """Transition A and shock loading b of m = (x lags, a lags): m[t] = A m[t−1] + b a[t].
+
+    Coefficients that are rows give one A a path, (paths, n, n).
+    """
+    n, paths = depth_x + depth_a, row_in((tuple(phi), tuple(theta)))
+    a, b = np.zeros((paths, n, n) if paths else (n, n)), np.zeros(n)
+    for k, coefficient in enumerate(phi):
+        a[..., 0, k] = coefficient
+    for k, coefficient in enumerate(theta):
+        a[..., 0, depth_x + k] = coefficient
     for i in range(1, depth_x):
-        a[i, i - 1] = 1.0
+        a[..., i, i - 1] = 1.0
     for i in range(1, depth_a):
-        a[depth_x + i, depth_x + i - 1] = 1.0
+        a[..., depth_x + i, depth_x + i - 1] = 1.0
     b[0] = 1.0
     if depth_a:
         b[depth_x] = 1.0
@@ -103,6 +110,8 @@ def companion(phi: Sequence[float], theta: Sequence[float], depth_x: int, depth_
 
 def stationary_cross(a: Array, q: Array, b: Array) -> Array:
     """Σ_j aʲ q b′ʲ by doubling: S ← S + a S b′, a ← a², b ← b²."""
+    if max(a.ndim, q.ndim, b.ndim) > 2:
+        return _crosses(a, q, b)
     if q.size == 1:
         return np.full((1, 1), _cross_of_one(float(a[0, 0]), float(q[0, 0]), float(b[0, 0])))
     total = q
@@ -110,6 +119,19 @@ def stationary_cross(a: Array, q: Array, b: Array) -> Array:
         added = matmul(matmul(a, total), b.T.copy())
         total = total + added
         if np.max(np.abs(added)) <= 2.0**-60 * np.max(np.abs(total)):
+            return total
+        a, b = matmul(a, a), matmul(b, b)
+
+
+def _crosses(a: Array, q: Array, b: Array) -> Array:
+    """`stationary_cross` of many paths (paths, n, m), each with as many doublings as it takes alone."""
+    total, done = q, np.zeros(1, dtype=bool)
+    while True:
+        added = matmul(matmul(a, total), np.swapaxes(b, -1, -2))
+        total = np.where(done[..., None, None], total, total + added)
+        largest, change = (np.max(np.abs(part), axis=(-1, -2)) for part in (total, added))
+        done = done | (change <= 2.0**-60 * largest)
+        if done.all():
             return total
         a, b = matmul(a, a), matmul(b, b)
 
@@ -159,11 +181,11 @@ def _decay_of_one(a: float, negligible: float) -> int:
 
 @dataclass(frozen=True)
 class Member:
-    """One linear term in a joint start: its recursion, and its shock's standard deviation."""
+    """One linear term in a joint start: its recursion, and its shock's standard deviation; or rows, one a path."""
 
-    phi: tuple[float, ...]
-    theta: tuple[float, ...]
-    sd: float
+    phi: tuple[Any, ...]
+    theta: tuple[Any, ...]
+    sd: Any
 
     @property
     def p(self) -> int:
@@ -183,21 +205,24 @@ class JointStart:
     def __init__(self, members: Sequence[Member], correlation: Array):
         self.members = tuple(members)
         self.correlation = np.asarray(correlation, dtype=np.float64)
+        self.paths = max((row_in((m.phi, m.theta, m.sd)) for m in self.members), default=0)
+        if self.paths and any(len(m.phi) > DENSE and not m.q for m in self.members):
+            raise Unlike("long autoregressions start from predictors of their own")
 
     def _covariance(self, extra: int) -> tuple[Array, list[int], list[int]]:
         """S of all members to `extra` more depth; the indices of the core, and of the newest-first rest."""
         depths = [(m.p + extra, m.q + extra if m.q else 0) for m in self.members]
         systems = [companion(m.phi, m.theta, *depth) for m, depth in zip(self.members, depths, strict=True)]
         offsets = np.concatenate([[0], np.add.accumulate([p + q for p, q in depths])])
-        s = np.zeros((offsets[-1], offsets[-1]))
+        s = np.zeros((*([self.paths] if self.paths else []), offsets[-1], offsets[-1]))
         for i, (ai, bi) in enumerate(systems):
             for j, (aj, bj) in enumerate(systems[: i + 1]):
                 scale = self.correlation[i, j] * self.members[i].sd * self.members[j].sd
-                if scale == 0.0:
+                if np.all(scale == 0.0):
                     continue
-                block = stationary_cross(ai, scale * (bi[:, None] * bj[None, :]), aj)
-                s[offsets[i] : offsets[i + 1], offsets[j] : offsets[j + 1]] = block
-                s[offsets[j] : offsets[j + 1], offsets[i] : offsets[i + 1]] = block.T
+                block = stationary_cross(ai, _times(scale, bi[:, None] * bj[None, :]), aj)
+                s[..., offsets[i] : offsets[i + 1], offsets[j] : offsets[j + 1]] = block
+                s[..., offsets[j] : offsets[j + 1], offsets[i] : offsets[i + 1]] = np.swapaxes(block, -1, -2)
         core, rest = [], []
         for m, (px, qa), o in zip(self.members, depths, offsets, strict=False):
             o = int(o)
@@ -209,16 +234,16 @@ class JointStart:
     def factor(self) -> Array:
         """Lower factor of the core covariance: rows are each member's shocks, then its values."""
         s, core, _ = self._covariance(0)
-        return cholesky(s[np.ix_(core, core)])
+        return cholesky(s[..., core, :][..., core])
 
     @cached_property
     def further(self) -> tuple[Array, Array]:
         """Weights on the core, and the factor of what is new, for one more step back."""
         s, core, rest = self._covariance(1)
         order = core + rest
-        whole = cholesky(s[np.ix_(order, order)])
+        whole = cholesky(s[..., order, :][..., order])
         n = len(core)
-        return _solve_right(whole[:n, :n], whole[n:, :n]), whole[n:, n:]
+        return _solve_right(whole[..., :n, :n], whole[..., n:, :n]), whole[..., n:, n:]
 
     @cached_property
     def alone(self) -> dict[int, Predictors]:
@@ -229,14 +254,14 @@ class JointStart:
             if len(m.phi) > DENSE and not m.q and not np.any(self.correlation[i, :i])
         }
 
-    def variance(self, index: int = 0) -> float:
-        """The stationary variance of one member's values."""
+    def variance(self, index: int = 0) -> Any:
+        """The stationary variance of one member's values, a row where its numbers are rows."""
         member = self.members[index]
         if len(member.phi) > DENSE and not member.q:
             return float(Predictors(member.phi, member.sd).variances[0])
         a, b = companion(member.phi, member.theta, member.p, member.q)
-        s = stationary_cross(a, member.sd * member.sd * (b[:, None] * b[None, :]), a)
-        return float(s[0, 0])
+        s = stationary_cross(a, _times(member.sd * member.sd, b[:, None] * b[None, :]), a)
+        return plain(s[..., 0, 0])
 
     def settle(self, z: Sequence[Array]) -> Array:
         """The one member's past values, newest first, from its scaled shocks and then its start normals."""
@@ -295,6 +320,8 @@ class JointStart:
 
 def weigh(matrix: Array, vectors: Sequence[Array]) -> list[Array]:
     """Rows Σ_j matrix[i, j]·vectors[j], added in order; exact zeros are passed over."""
+    if matrix.ndim > 2:
+        return [_weighed(weights.T, vectors) for weights in np.moveaxis(matrix, 1, 0)]
     out = []
     for weights in matrix:
         total = None
@@ -305,14 +332,29 @@ def weigh(matrix: Array, vectors: Sequence[Array]) -> list[Array]:
     return out
 
 
+def _weighed(weights: Array, vectors: Sequence[Array]) -> Array:
+    """Σ_j weights[j]·vectors[j] of weights (count, paths), as `weigh` has it for each path."""
+    total = np.full(weights.shape[1], -0.0)  # what changes nothing that is added to it
+    for w, v in zip(weights, vectors, strict=True):
+        if w.any():
+            total = np.where(w != 0.0, total + w * v, total)
+    return np.where(weights.any(axis=0), total, 0.0)
+
+
+def _times(scale: Any, matrix: Array) -> Array:
+    """A matrix times a number, or one matrix a path of a row."""
+    return scale[:, None, None] * matrix if np.ndim(scale) else scale * matrix
+
+
 def _solve_right(lower: Array, rows: Array) -> Array:
     """W with W·lower = rows, for a lower factor whose zero columns stand for what is already determined."""
     w = np.zeros_like(rows)
-    for j in range(lower.shape[0] - 1, -1, -1):
-        if lower[j, j] == 0.0:
+    for j in range(lower.shape[-1] - 1, -1, -1):
+        pivot = lower[..., j, j, None]
+        if not pivot.any():
             continue
-        rest = rows[:, j].copy()
-        for i in range(j + 1, lower.shape[0]):
-            rest = rest - w[:, i] * lower[i, j]
-        w[:, j] = rest / lower[j, j]
+        rest = rows[..., :, j].copy()
+        for i in range(j + 1, lower.shape[-1]):
+            rest = rest - w[..., :, i] * lower[..., i, j, None]
+        w[..., :, j] = np.where(pivot != 0.0, rest / np.where(pivot != 0.0, pivot, 1.0), 0.0)
     return w

@@ -10,6 +10,7 @@ from __future__ import annotations
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from functools import cached_property
+from typing import Any
 
 import numpy as np
 
@@ -75,8 +76,8 @@ class Varied:
         """The values of every parameter on a range of paths, each (paths,)."""
         return {name: p.values(first_path, paths) for name, p in self.parameters.items()}
 
-    def at(self, values: Mapping[str, float], spec: Spec | None = None) -> Spec:
-        """The spec, or a part of it, with these values of its parameters in place."""
+    def at(self, values: Mapping[str, Any], spec: Spec | None = None) -> Spec:
+        """The spec, or a part of it, with these values of its parameters in place: numbers, or rows of them."""
         return fixed(spec or self.spec, lambda owner, varying: varying.number(values[varying.key(owner)]), self._owners)
 
     @cached_property

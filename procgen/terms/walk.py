@@ -27,6 +27,7 @@ class RandomWalk(Term):
     knows = "mean and covariance at any steps"
     takes_shock = True
     by_rows = ("sd", "drift", "start")
+    begins_by_rows = True
     parameters = (
         SD,
         Parameter("drift", "d", Real(), "mean change a step", default=0.0, unit="series", per="rate"),
@@ -55,7 +56,7 @@ class RandomWalk(Term):
             x = rows(self.before["x"])
             return x[len(x) - before.head :], {"x": x[-1:]}
         # Two-sided: the walk passes through `start` at step 0 and is followed backwards from there.
-        x, past = np.full((1, 1), float(self.start)), []
+        x, past = np.array(self.start, dtype=np.float64).reshape(1, -1), []
         increments = [before.peek(0)[0], *before.inputs[0][::-1]] if before.head else []
         for a in increments[: before.head]:
             x = x - (self.drift + a)

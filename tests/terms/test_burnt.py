@@ -8,6 +8,7 @@ from procgen.terms import by_path
 
 DRAWN = {"draw": {"uniform": [0.05, 0.15]}, "over": "path"}
 GARCH = {"garch": {"sd": 1, "alpha": DRAWN, "beta": 0.8}}
+PATH_BY_PATH = {"gjr_garch": {"sd": 1, "alpha": DRAWN, "gamma": 0.1}}  # beside it all paths have graphs of their own
 FEW = {"draw": {"choice": [0.8, 0.85, 0.9]}, "over": "path"}
 BODIES = {
     "garch": GARCH,
@@ -21,8 +22,10 @@ BODIES = {
 @pytest.mark.parametrize("name", BODIES)
 def test_together_is_one_by_one(name, monkeypatch):
     head = {"procgen": 1, "seed": 3, "paths": 70, "time": {"steps": 12}}
-    spec = pg.load({**head, "series": {"x": [BODIES[name]]}})
+    spec = pg.load({**head, "series": {"x": [BODIES[name]], "y": [PATH_BY_PATH]}})
     together = np.array(pg.render(spec)["x"])
+    rows = np.array(pg.render({**head, "series": {"x": [BODIES[name]]}})["x"])
+    assert np.array_equal(together, rows)
     asked, can = [], by_path.can_burn_together
 
     def never(*told):

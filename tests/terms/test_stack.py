@@ -11,7 +11,7 @@ from procgen.spec.model import SpecError
 from procgen.spec.reader import read_raw
 from procgen.spec.varying import varying_of
 from procgen.terms import catalogue
-from procgen.terms.by_path import run, varied_of
+from procgen.terms.by_path import RowRun, run, varied_of
 from procgen.terms.graph import Graph, build
 from procgen.terms.run import Run
 from procgen.terms.stack import Stack
@@ -91,8 +91,14 @@ def test_every_number_of_a_term_may_vary(name, at):
             assert np.array_equal(found, run(graph, 0, PATHS).tile(STEPS)["x"])
 
 
-@pytest.mark.parametrize("name", ["noise", "ar1", "ar2", "ma", "walk", "ou", "garch"])
-def test_these_run_as_rows(name):
+@pytest.mark.parametrize("name", ["noise", "ar1", "ar2", "ma", "walk", "ou", "garch", "trend", "season"])
+def test_these_begin_and_run_as_rows(name):
+    at = next(iter(places(BODIES[name])))
+    assert isinstance(run(build(spec_of(varied(BODIES[name], at))), 0, PATHS)._whole, RowRun)
+
+
+@pytest.mark.parametrize("name", ["ar_student", "arma_garch"])
+def test_these_begin_path_by_path_and_run_as_rows(name):
     at = next(iter(places(BODIES[name])))
     runner = run(build(spec_of(varied(BODIES[name], at))), 0, PATHS)
     stacks = [node.term for node, _ in runner._nodes]
@@ -103,7 +109,7 @@ def test_the_search_for_cycles_goes_on_after_the_graphs_are_made():
     import gc
 
     assert gc.isenabled()
-    runner = run(build(spec_of(varied(BODIES["ar1"], next(iter(places(BODIES["ar1"])))))), 0, PATHS)
+    runner = run(build(spec_of(varied(BODIES["ar_student"], next(iter(places(BODIES["ar_student"])))))), 0, PATHS)
     assert gc.isenabled()
     runner.tile(3)
     assert gc.isenabled()

@@ -1,0 +1,147 @@
+"""Numbers drawn by path as rows of one graph: the same bits as each path of its own spec, and no graph a path."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+from scipy.linalg import solve_discrete_lyapunov
+
+from procgen.chance.laws import LAWS
+from procgen.chance.portable import cholesky
+from procgen.spec.reader import read_raw
+from procgen.terms import catalogue
+from procgen.terms.by_path import RowRun, run, varied_of
+from procgen.terms.graph import Graph, build
+from procgen.terms.rows import alike, each_path, row_in
+from procgen.terms.run import Run
+from procgen.terms.start import JointStart, Member, companion, stationary_cross, weigh
+
+FIRST, PATHS, STEPS = 2, 8, 12
+
+
+def drawn(low, high):
+    return {"draw": {"uniform": [low, high]}, "over": "path"}
+
+
+def lagged(by, entry):
+    return {"lag": {"of": [entry], "by": by}}
+
+
+STUDENT = {"student_t": {"df": 5}}
+AR = {"phi": drawn(0.2, 0.9), "sd": 1.0}
+GARCH = {"garch": {"sd": drawn(1, 2), "alpha": drawn(0.05, 0.15), "beta": drawn(0.5, 0.84)}}
+BODIES = {
+    "ar of three": [{"ar": {"phi": [drawn(-0.3, 0.5), 0.0, drawn(-0.4, 0.4)], "total_sd": drawn(1, 2)}}],
+    "ar of few values": [{"ar": {"phi": {"draw": {"choice": [0.0, 0.5]}, "over": "path"}, "sd": 1.0}}],
+    "arma far back": [lagged(5, {"arma": {"phi": drawn(0.1, 0.5), "theta": [drawn(0.1, 0.4), 0.2], "sd": 1.5}})],
+    "arma": [{"arma": {"phi": [0.5, drawn(-0.3, 0.3)], "theta": 0.3, "total_sd": drawn(1, 3)}}],
+    "ma not normal": [lagged(2, {"ma": {"theta": [drawn(0.1, 0.5), 0.2], "sd": drawn(1, 2), "law": STUDENT}})],
+    "ar not normal": [{"ar": {"phi": [0.5, 0.2], "sd": drawn(1, 2), "law": STUDENT}}],
+    "walk": [lagged(3, {"random_walk": {"sd": drawn(0.1, 1), "drift": drawn(-1, 1), "start": drawn(-3, 3)}})],
+    "walk of garch": [{"random_walk": {"drift": drawn(0, 1), "shock": GARCH}}],
+    "ar of garch": [lagged(2, {"ar": {"phi": 0.6, "shock": GARCH}})],
+    "garch far back": [lagged(7, {"garch": {"omega": 0.1, "alpha": drawn(0.05, 0.1), "beta": drawn(0.1, 0.85)}})],
+    "garch without variance": [
+        {"garch": {"omega": 0.1, "alpha": drawn(0.1, 0.4), "beta": drawn(0.5, 0.65), "allow_infinite_variance": True}}
+    ],
+    "arch": [{"arch": {"omega": drawn(0.1, 1), "alpha": drawn(0.1, 0.8)}}],
+    "spread": [{"white_noise": {"spread": drawn(1, 2), "law": {"stable": {"alpha": 1.5}}}}],
+    "pulled": [lagged(3, {"ornstein_uhlenbeck": {"rate": drawn(0.01, 2), "mean": drawn(-2, 2), "total_sd": 1.5}})],
+    "pulled from a past": [
+        {"ornstein_uhlenbeck": {"rate": drawn(0.01, 2), "mean": 2.0, "sd": drawn(1, 2), "before": {"x": [3.0]}}}
+    ],
+    "levels": [
+        lagged(2, {"trend": {"level": drawn(0, 1), "slope": drawn(0, 1), "bends": [{"at": 3, "slope": drawn(-1, 1)}]}}),
+        {"constant": drawn(-1, 1), "times": drawn(1, 2)},
+        {"seasonal": {"period": 7, "harmonics": [{"amplitude": drawn(1, 2)}, {"amplitude": 0.5}]}, "times": 0.5},
+    ],
+    "within others": [
+        {"exp": [{"ar": {"phi": drawn(0.2, 0.9), "total_sd": 0.3}}]},
+        {"product": [{"constant": drawn(1, 2)}, {"white_noise": {"sd": drawn(1, 2)}}]},
+        {"regimes": {"branches": {"a": [{"ma": {"theta": drawn(0.2, 0.9), "sd": 1}}], "b": [{"trend": {"level": 4}}]},
+                     "durations": {"a": 5.0, "b": 3.0}}},
+    ],
+}  # fmt: skip
+TIED = {
+    "linear": ({"ar": AR}, {"arma": {"phi": 0.3, "theta": drawn(0.1, 0.5), "sd": 2.0}}),
+    "far back": (lagged(4, {"ar": AR}), {"ar": {"phi": [0.3, 0.2], "sd": 2.0}}),
+    "garch": (GARCH, {"white_noise": {"sd": drawn(1, 2)}}),
+}  # fmt: skip
+
+
+def assert_as_alone(raw):
+    graph = build(read_raw({"seed": 3, "paths": 20, "time": {"steps": STEPS}, **raw}, catalogue(), LAWS))
+    runner = run(graph, FIRST, PATHS)
+    tiles = [runner.tile(5), runner.tile(STEPS - 5)]
+    assert isinstance(runner._whole, RowRun)
+    rows = varied_of(graph).rows(FIRST, PATHS)
+    for p in range(PATHS):
+        own = Graph(varied_of(graph).at({key: float(row[p]) for key, row in rows.items()}))
+        alone = Run(own, FIRST + p, 1).tile(STEPS)
+        for name in raw["series"]:
+            assert np.array_equal(np.concatenate([tile[name][:, p] for tile in tiles]), alone[name][:, 0]), (name, p)
+
+
+@pytest.mark.parametrize("name", BODIES)
+def test_rows_give_the_bits_of_each_path_alone(name):
+    assert_as_alone({"series": {"x": BODIES[name]}})
+
+
+@pytest.mark.parametrize("name", TIED)
+def test_rows_with_correlated_shocks(name):
+    first, second = TIED[name]
+    names = ["x.ar" if "lag" in first else f"x.{next(iter(first))}", f"y.{next(iter(second))}"]
+    correlation = {"names": names, "matrix": [[1, -0.7], [-0.7, 1]]}
+    assert_as_alone({"series": {"x": [first], "y": [second]}, "correlation": correlation})
+
+
+def test_one_graph_is_made_for_all_paths(monkeypatch):
+    raw = {"seed": 3, "paths": 500, "time": {"steps": 3}, "series": {"x": BODIES["arma"]}}
+    graph, made = build(read_raw(raw, catalogue(), LAWS)), []
+    monkeypatch.setattr(Graph, "_plan", lambda self, plan=Graph._plan: (made.append(self), plan(self))[1])
+    assert run(graph, 0, 500).tile(3)["x"].shape == (3, 500)
+    assert len(made) == 1
+
+
+def test_a_term_that_begins_path_by_path_still_does():
+    """An autoregression that burns in, for each path as long as its own coefficient asks for."""
+    body = [{"ar": {"phi": drawn(0.2, 0.9), "shock": {"gjr_garch": {"sd": 1.0, "alpha": 0.1, "gamma": 0.1}}}}]
+    graph = build(read_raw({"seed": 3, "paths": 4, "time": {"steps": 3}, "series": {"x": body}}, catalogue(), LAWS))
+    assert not isinstance(run(graph, 0, 4)._whole, RowRun)
+
+
+def test_a_factor_of_many_covariances_is_that_of_each():
+    a = np.random.default_rng(1).normal(size=(6, 3, 3))
+    s = a @ np.swapaxes(a, 1, 2)
+    s[0], s[1, :, 2], s[1, 2, :] = 1.0, 0.0, 0.0  # one of rank 1, and one with a part that does not move
+    factors = cholesky(s)
+    assert np.array_equal(factors, np.array([cholesky(one) for one in s]))
+    assert np.allclose(factors @ np.swapaxes(factors, 1, 2), s)
+    with pytest.raises(ValueError, match="positive semidefinite"):
+        cholesky(np.array([np.eye(2), -np.eye(2)]))
+
+
+def test_stationary_covariances_of_many_paths_solve_their_equation():
+    """Outside source: scipy.linalg.solve_discrete_lyapunov, for each path."""
+    first, second = np.array([0.2, 0.6, 0.9]), np.array([0.1, 0.2, -0.3])
+    a, b = companion((first, second), (np.full(3, 0.4),), 2, 1)
+    q = np.broadcast_to(b[:, None] * b[None, :], a.shape)
+    for own, found in zip(a, stationary_cross(a, q, a), strict=True):
+        assert np.allclose(found, solve_discrete_lyapunov(own, q[0]), rtol=1e-10)
+
+
+def test_a_weight_of_0_on_some_paths_is_passed_over_there():
+    start = JointStart([Member((np.array([0.5, 0.0]),), (), np.array([1.0, 2.0]))], np.ones((1, 1)))
+    assert start.factor.shape == (2, 1, 1)
+    z = [np.array([5.0, 1.0]), np.array([2.0, 3.0])]
+    (found,) = weigh(np.array([[[0.0, 0.5]], [[2.0, 0.0]]]), z)
+    assert found.tolist() == [1.0, 2.0]
+
+
+def test_numbers_beside_rows_become_rows():
+    row = np.array([1.0, 2.0])
+    assert [part.tolist() for part in alike((row, 3.0))] == [[1.0, 2.0], [3.0, 3.0]]
+    assert alike((1.0, 2.0)) == (1.0, 2.0)
+    assert row_in({"a": ((1.0, row),)}) == 2 and row_in((1.0, "x")) == 0
+    terms = each_path(catalogue()["constant"]({"level": row}))
+    assert [term.level for term in terms] == [1.0, 2.0]
