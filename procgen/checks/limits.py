@@ -9,6 +9,7 @@ from procgen.checks.judge import FEW_PATHS, Sample
 from procgen.checks.probes import SeriesPlan
 from procgen.checks.sums import Powers
 from procgen.checks.verdict import Check
+from procgen.checks.words import many
 
 _STILL = 1e-9  # a spread below this share of the stated value is one of rounding
 
@@ -21,7 +22,7 @@ def sample_of(powers: Powers, k: int) -> Sample:
 
 def few_paths(n: int, wanted: int) -> str:
     """Why an estimate of n paths is not judged; that it is the same on all of them where these would be enough."""
-    why = f"only {n} paths of at least {wanted}" if n < wanted else f"it is the same on all {n} paths"
+    why = f"only {many(n, 'path')} of at least {wanted}" if n < wanted else f"it is the same on all {n} paths"
     return f"{why}: reported, not judged"
 
 

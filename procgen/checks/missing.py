@@ -205,7 +205,7 @@ def key(series: str) -> str:
 
 def sums(gaps: dict[str, Any]) -> dict[str, EventSums]:
     """What is counted of all series with gaps, by its key."""
-    return {key(name): GapSums(term) for name, term in gaps.items()} | masks.sums(gaps)
+    return {**{key(name): GapSums(term) for name, term in gaps.items()}, **masks.sums(gaps)}
 
 
 def join(plan: Any, events: dict[str, Any], first_step: int, lanes: dict[str, Any]) -> None:

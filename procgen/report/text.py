@@ -19,7 +19,7 @@ CAUTION = (
     "not make the model right; they do not replace the rules that bind you or the judgement of a licensed professional."
 )
 _BAR = 12
-_WANTED = re.compile(r" paths of at least (\d+): reported")
+_WANTED = re.compile(r" paths? of at least (\d+): reported")
 
 
 def table(head: Sequence[str], rows: Sequence[Sequence[str]], left: Sequence[int] = (0,)) -> list[str]:
