@@ -25,6 +25,7 @@ from procgen.checks.start import comparable, differences
 from procgen.checks.structure import Precision, Structure
 from procgen.checks.sums import Kept, Moments, Powers
 from procgen.checks.tied import TiedSums
+from procgen.checks.untied import UntiedSums
 
 
 @dataclass
@@ -90,13 +91,16 @@ class Plan:
             self.routes[name].allow(variance)  # type: ignore[union-attr]
 
 
+FEW_PAIRS = 6  # up to so many, longer lags are looked at, too
 _FELT = 1e-9  # a correlation of shocks that is more than rounding
 
 
-def sums_of(stated: Expected) -> CrossSums:
-    """The sums that a pair of series is judged by."""
+def sums_of(stated: Expected, few: bool) -> CrossSums:
+    """The sums that a pair of series is judged by; `few`: there are not many pairs."""
     if stated.tie is not None:
         return TiedSums(stated.same_sides, hasattr(stated.tie, "states"))
+    if not stated.at and not stated.unknown:
+        return UntiedSums(few)
     spread = any(abs(c) > _FELT for lag, c in stated.at.items() if lag)  # components of a system, as a rule
     return CrossSums(FAR if spread else NEAR)
 
@@ -137,7 +141,8 @@ class Gather:
         self.events = {name: EventSums(way.watched) for name, way in self.routes.items() if way.watched}
         self.events |= missing.sums(plan.gaps)
         self.squares = {name: SquareSums(each) for name, each in plan.squares.items()}
-        self.cross = {pair: sums_of(stated) for pair, stated in plan.shock_pairs.items()}
+        few = len(plan.shock_pairs) <= FEW_PAIRS
+        self.cross = {pair: sums_of(stated, few) for pair, stated in plan.shock_pairs.items()}
 
     def finish_lane(
         self, first_path: int, probes: NDArray, pools: Sequence[NDArray], prints: NDArray, related: Sequence[NDArray]

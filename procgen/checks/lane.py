@@ -134,8 +134,9 @@ class Lane:
 
     def _pairs(self, steps: int) -> None:
         for pair, sums in self.sums.cross.items():
-            a, b = (self.shocks[name].view for name in pair)
-            sums.absorb(a, b, steps, self.plan.shock_pairs[pair].ready - self.step, self.cross[pair])
+            a, b = (self.shocks[name] for name in pair)
+            sums.beside(a, b, steps, self.cross[pair])
+            sums.absorb(a.view, b.view, steps, self.plan.shock_pairs[pair].ready - self.step, self.cross[pair])
 
     def finish(self) -> Gather:
         """The sums, after the last step."""

@@ -28,7 +28,7 @@ FIRST_LAG = 6  # before it are the sums by path that have no lag: of g, g², z, 
 class ShockLane:
     """What is carried from tile to tile for one range of paths.
 
-    `scores` and `clusters` hold the last rows; `view` is that of the scores, the newest tile at its end.
+    `scores` and `clusters` hold the last rows; `view` and `sizes` are those of both, the newest tile at their end.
     """
 
     def __init__(self, paths: int, lags: Sequence[int] = MEMORY_LAGS, first_path: int = 0):
@@ -37,9 +37,19 @@ class ShockLane:
         self.totals = np.zeros((FIRST_LAG + len(lags) + len(CLUSTER_LAGS), paths))
         self.beside = np.zeros(max(paths - 1, 0))  # products with the left neighbour
         self.length = np.zeros(paths, dtype=np.int64)
-        self.view = np.empty((0, paths))
+        self.view = self.sizes = np.empty((0, paths))
+        self._earlier: NDArray | None = None
         self.stretches = StretchLane(paths)
         self.clean = 0  # steps without a gap, up to the last one
+
+    def earlier(self) -> NDArray:
+        """At each step of the view from its 13th on, the sum of the scores 3 to 12 steps before."""
+        if self._earlier is None:
+            two = self.view[1:] + self.view[:-1]
+            four = two[2:] + two[:-2]
+            self._earlier = four[6:-3] + four[2:-7]
+            self._earlier += two[:-11]
+        return self._earlier
 
     def sound(self) -> bool:
         """Whether all that is held is known."""
@@ -97,6 +107,7 @@ class ShockSums:
 
     def absorb(self, z: NDArray, first_step: int, lane: ShockLane, x: NDArray | None = None) -> None:
         """Add the shocks of a tile, NaN where there is none, of the values x."""
+        lane._earlier = None
         known = np.isfinite(z)
         whole, offset = bool(known.all()), 0
         if not whole and not lane.scores.held:  # nothing is carried so far: it begins with the first shock
@@ -130,6 +141,7 @@ class ShockSums:
 
         steps, paths = g.shape
         lane.view, clusters = lane.scores.push(g), lane.clusters.room(steps)
+        lane.sizes = clusters
         g = lane.view[len(lane.view) - steps :]
         worst, sums = np.empty(steps, np.int64), np.empty((2, steps))
         short = np.empty((steps // LENGTHS[0], paths))
@@ -156,6 +168,7 @@ class ShockSums:
     def _along(self, g: NDArray, clusters: NDArray, lane: ShockLane, offset: int) -> None:
         """Products with earlier steps of the same path."""
         lane.view, squares = lane.scores.push(g), lane.clusters.push(clusters)
+        lane.sizes = squares
         rows = lane.totals[FIRST_LAG:]
         for i, lag in enumerate(self.lags):
             self.memory[0, i] += add_lagged(rows[i], lane.view, lane.view, lag, len(g), offset)
@@ -261,6 +274,9 @@ class CrossSums:
             later, earlier = (a, b) if lag >= 0 else (b, a)
             new = min(steps, steps - ready - abs(lag))
             self.sums[lag][0] += add_lagged(totals[k], later, earlier, abs(lag), new, steps - new)
+
+    def beside(self, a: ShockLane, b: ShockLane, steps: int, totals: NDArray) -> None:
+        """Add what else is looked at in the last `steps` steps of two series."""
 
     def finish(self, totals: NDArray) -> None:
         for lag, total in zip(self.lags, across(totals), strict=True):

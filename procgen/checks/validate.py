@@ -29,6 +29,7 @@ from procgen.checks.squares import plan_squares
 from procgen.checks.structure import Precision
 from procgen.checks.support import Possible, possible_of, vanishes
 from procgen.checks.tied import tied_checks
+from procgen.checks.untied import UntiedSums, untied_checks
 from procgen.checks.verdict import Check, Verdict
 from procgen.ensemble.plan import Block
 
@@ -228,6 +229,8 @@ def judged(gather: Gather) -> Iterator[Check]:
             yield from tied_checks(name, sums, stated)
         else:
             yield from cross_checks(name, sums, stated.at)
+            if isinstance(sums, UntiedSums):
+                yield from untied_checks(name, sums)
 
 
 def _known(gather: Gather, series: SeriesPlan) -> Check:

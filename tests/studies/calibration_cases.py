@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.chance.laws import LAWS
-from procgen.checks import apart, farthest, judge, judge_shocks
+from procgen.checks import apart, farthest, judge, judge_shocks, untied
 from procgen.checks.judge import Finding, Sample
 from procgen.checks.scores import BINS, Scores, cluster_scores
 from procgen.checks.shocks import CrossSums, ShockLane, ShockSums
@@ -378,6 +378,27 @@ def farthest_of(n: int) -> Findings:
     return findings
 
 
+def sizes_together(n: int) -> Findings:
+    """The correlation of the sizes of n pairs of independent shocks."""
+
+    def draw(rng: Rng, count: int) -> NDArray:
+        return np.einsum("cn,cn->c", *(cluster_scores(rng.random((count, n))) for _ in range(2)))
+
+    return of_one_number(draw, lambda total: untied.size_finding(n, total), 0.0, math.sqrt(n))
+
+
+def longer_lags(steps: int, paths: int) -> Findings:
+    """Products of scores with sums over the ten steps before the two before."""
+
+    def draw(rng: Rng, count: int) -> NDArray:
+        a, b = rng.standard_normal((2, steps, count, paths))
+        sums = np.array([b[t - untied.LAST : t - untied.FIRST + 1].sum(axis=0) for t in range(untied.LAST, steps)])
+        return np.einsum("tcp,tcp->c", a[untied.LAST :], sums)
+
+    n = (steps - untied.LAST) * paths
+    return of_one_number(draw, lambda total: untied.lags_finding(n, total), 0.0, math.sqrt(10 * n))
+
+
 def many_products(pairs: int) -> Findings:
     """As many products, each of two normals of its own."""
     return of_one_number(
@@ -533,6 +554,10 @@ CASES = (
     Case("shocks: memory of the worst of 30 paths", 50_000, worst_path("memory", 30, 20), 600),
     Case("shocks: farthest of 2,000", 400_000, farthest_of(2000), 100),
     Case("shocks: farthest of 1,000,000", 400_000, farthest_of(1_000_000), 100),
+    Case("shocks: correlation of sizes, 60 pairs", 2_000_000, sizes_together(60), 120),
+    Case("shocks: correlation of sizes, 1,000 pairs", 200_000, sizes_together(1000), 2000),
+    Case("shocks: correlation at longer lags, 40 steps, 10 paths", 200_000, longer_lags(40, 10), 1100),
+    Case("shocks: correlation at longer lags, 1,000 steps", 100_000, longer_lags(1000, 1), 2000),
     Case("worst of 200 steps", 1_000_000, worst_of(200), 200),
     Case("sums of 6 squares", 10_000_000, squares(6)),
 )
