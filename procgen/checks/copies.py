@@ -48,6 +48,12 @@ class Repeats:
 
     chance: float
     values: int = 0
+    cell: float = 0.0
+
+    def on(self, cell: float) -> Repeats | None:
+        """The same for values that are seen to be rounded to coarser cells; None where these may repeat much."""
+        chance = self.chance * cell / self.cell if self.cell else 1.0
+        return Repeats(chance, self.values, cell) if chance < _LIKELY else None
 
     @property
     def ends(self) -> np.uint64:
@@ -87,7 +93,7 @@ def repeats_of(plan: Any, way: Any, graph: Any, lumpy: bool, values: int) -> Rep
         chance = cell / (math.sqrt(2.0 * math.pi) * kalman.roots[-1])  # a normal density at its peak
     else:  # shocks may be much smaller than values, and densities much higher than a normal one
         chance = 1e3 * cell / math.sqrt(float(drawn.min()))
-    repeats = Repeats(chance, values)
+    repeats = Repeats(chance, values, cell)
     return repeats if 0.0 < chance < _LIKELY and repeats.length <= LONGEST else None
 
 

@@ -21,6 +21,7 @@ from procgen.checks.words import FARTHEST, number
 
 COUNTED = 32  # values of a series that are counted, the most that are kept of one value
 KEPT = COUNTED + 1  # one more shows whether there are others than these
+MARK = "all of them are this value, as if it marked what is missing"
 _LEAST = 4.0  # standard deviations, below which a value is of no interest
 _FARTHEST = 1e300  # standard deviations that are told apart
 _CHUNK = 1 << 15  # steps whose theory is asked for at once, at most
@@ -172,7 +173,7 @@ def _told(place: str, first: Far, count: int, alone: bool, same: bool) -> str:
     """The values outside in words; a count of 0 is more than are kept."""
     many = "one value" if count == 1 else f"{count:,} values" if count else f"at least {COUNTED} values"
     each = "" if count == 1 else "such as " if same else "the farthest "
-    mark = "; all of them are this value, as if it marked what is missing" if same and alone else ""
+    mark = f"; {MARK}" if same and alone else ""
     return (
         f"{many} {'far ' if alone else ''}outside what the law allows: {each}{place}, value "
         f"{number(first[3], 6)} (expected about {number(first[4], 4)} ± {number(first[5], 3)}){mark}"

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Container, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -12,10 +12,14 @@ from numpy.typing import NDArray
 from procgen.checks import copies, extremes, support
 from procgen.checks.blocks import compiled
 from procgen.checks.verdict import Check
+from procgen.checks.words import many
 
 _AT_ONCE = 1 << 14  # values of a fingerprint: what is computed on the way stays in the cache
 _SAMPLE = 61  # every so manieth step's bits are looked at for a detour through float32; at least 32 steps
 _SPACING = {"float32": 2.0**-24 + 4e-16}  # how far, of its size, a stored decimal number may lie from itself
+_GRIDS = {1: 10.0, 2: 100.0, 3: 1000.0}  # decimals to which values may be seen to be rounded
+_UNSEEN = (0, 0, 0, 0, 0, *(0 for _ in _GRIDS))  # that fit float32, whole ones, all, that fit float16, zeros; by grid
+_MOST = 0.9  # share of values that must be rounded
 _CERTAIN = 1e-12  # expected number of equal pairs below which one equal pair is no chance
 
 
@@ -42,7 +46,7 @@ class Structure:
     steps: int = 1  # of the whole ensemble
     not_finite: dict[str, list[int]] = field(default_factory=dict)  # series -> [count, path, step of the first]
     off_grid: dict[str, list[int]] = field(default_factory=dict)
-    narrow: dict[str, list[int]] = field(default_factory=dict)  # series -> [values that fit float32, whole ones, all]
+    narrow: dict[str, list[int]] = field(default_factory=dict)  # series -> counts of values, as _UNSEEN has them
     far: dict[str, list[extremes.Far]] = field(default_factory=dict)  # series -> its values farthest from their mean
     beyond: dict[str, list[int]] = field(default_factory=dict)  # series -> numbers of values outside, and absurd ones
     outside: dict[str, support.Found] = field(default_factory=dict)  # series -> values that it cannot give
@@ -71,8 +75,10 @@ class Structure:
             with np.errstate(over="ignore", invalid="ignore"):
                 fits = int(np.count_nonzero(sample.astype(np.float32) == sample))
                 whole = int(np.count_nonzero(np.rint(sample) == sample))
-            seen = self.narrow.setdefault(what.name, [0, 0, 0])
-            for k, count in enumerate((fits, whole, sample.size)):
+                half = int(np.count_nonzero(sample.astype(np.float16) == sample)) if fits else 0
+                grids = [int(np.count_nonzero(np.rint(sample * s) / s == sample)) for s in _GRIDS.values()]
+            seen = self.narrow.setdefault(what.name, [0] * len(_UNSEEN))
+            for k, count in enumerate((fits, whole, sample.size, half, int(np.count_nonzero(sample == 0.0)), *grids)):
                 seen[k] += count
         if what.reach is not None:
             self.far[what.name] = what.reach.farthest(x, first_path, first_step, self.far.get(what.name, ()), ends)
@@ -130,7 +136,7 @@ class Structure:
                 old = mine.setdefault(name, [0, path, step])
                 mine[name] = [old[0] + count, *min((old[1], old[2]), (path, step))]
         for name, counts in other.narrow.items():
-            self.narrow[name] = [a + b for a, b in zip(self.narrow.get(name, [0, 0, 0]), counts, strict=True)]
+            self.narrow[name] = [a + b for a, b in zip(self.narrow.get(name, _UNSEEN), counts, strict=True)]
         for name, values in other.far.items():
             self.far[name] = extremes.merged([*self.far.get(name, ()), *values])
         for name, counts in other.beyond.items():
@@ -144,16 +150,21 @@ class Structure:
 
     def checks(self, chance_of_equal: dict[str, float]) -> Iterator[Check]:
         """The facts as checks; `chance_of_equal` gives the probability that two paths of a series are equal."""
+        marked = set()
         for what in self.series:
             yield self._finite(what)
             yield self._precision(what)
             yield from support.checks(what.name, what.possible, self.outside.get(what.name), self.moved.get(what.name))
             if what.reach is not None:
                 n = self.steps * sum(len(rows) for _, rows in self.prints)
-                yield from extremes.checks(what.name, what.reach, self.far.get(what.name, ()), n, self.beyond.get(what.name, (0, 0)))
+                beyond = self.beyond.get(what.name, (0, 0))
+                for check in extremes.checks(what.name, what.reach, self.far.get(what.name, ()), n, beyond):
+                    if check.note.endswith(extremes.MARK):
+                        marked.add(what.name)
+                    yield check
         if self.prints:
             yield from self._copies(chance_of_equal)
-            yield from self._repeats()
+            yield from self._repeats(marked)
 
     def _finite(self, what: Precision) -> Check:
         fault, name = "", what.name
@@ -172,14 +183,38 @@ class Structure:
                 f"{count} value{'s have' if count > 1 else ' has'} more than the {what.decimals} decimals declared, "
                 f"the first at path {path}, step {step}"
             )
-        fits, whole, seen = self.narrow.get(what.name, [0, 0, 0])
-        if what.type == "float64" and seen >= 32 and fits > 0.9 * seen:
-            rounded = "values are rounded to whole numbers, where no rounding (`decimals: 0`) is declared"
-            narrowed = "values went through float32 (all fit in it), where float64 is declared"
-            fault = rounded if whole > 0.9 * seen else narrowed
+        fits, whole, seen, half, zeros, *_ = self.narrow.get(what.name, _UNSEEN)
+        if what.type == "float64" and seen >= 32 and fits > _MOST * seen:
+            type = "float16" if half > _MOST * seen else "float32"
+            mend = "" if type == "float16" else "; write `type: float32` if that is meant"
+            fault = f"values went through {type} (all fit in it), where float64 is declared{mend}"
+        if what.type == "float64" and seen >= 32 and whole > _MOST * seen:
+            fault = "values are rounded to whole numbers, where no rounding (`decimals: 0`) is declared"
+            fault = "all values are 0" if zeros == seen else fault
+        decimals = self._grid(what)
+        if decimals and any(row.outcome == "departs" for row in self._repeated(what, what.repeats)):
+            grid = many(decimals, "decimal")
+            fault = f"values are rounded to {grid}, which is not declared; write `decimals: {decimals}`"
         if what.type == "float32" and fits < seen:
             fault = "values are finer than float32, which is declared"
         return Check.fact(what.name, "precision", "all steps", fault, f"as declared: {declared}")
+
+    def _grid(self, what: Precision) -> int | None:
+        """The decimals to which values are seen to be rounded though none are declared; None where they are not."""
+        _, whole, seen, _, _, *grids = self.narrow.get(what.name, _UNSEEN)
+        if what.decimals is not None or seen < 32:
+            return None
+        counts = {0: whole, **dict(zip(_GRIDS, grids, strict=True))}
+        return next((decimals for decimals, count in counts.items() if count > _MOST * seen), None)
+
+    def _repeated(self, what: Precision, repeats: copies.Repeats | None) -> list[Check]:
+        """The checks of values that repeat, with the chance of that which is given."""
+        if repeats is None or what.name not in self.runs or not self.prints:
+            return []
+        column = list(self.series).index(what)
+        paths, prints = self.fingerprints()
+        run, marks = self.runs[what.name], self.marks[what.name]
+        return list(copies.checks(what.name, repeats, run, marks, paths, prints[:, column]))
 
     def _copies(self, chance_of_equal: dict[str, float]) -> Iterator[Check]:
         prints = np.concatenate([rows for _, rows in sorted(self.prints, key=lambda item: item[0])])
@@ -204,12 +239,25 @@ class Structure:
             yield Check.fact(what.name, "copied paths", "all pairs", fault, "no two paths are the same")
 
 
-    def _repeats(self) -> Iterator[Check]:
-        paths, prints = self.fingerprints()
-        for column, what in enumerate(self.series):
-            if what.repeats is not None and what.name in self.runs:
-                run, marks = self.runs[what.name], self.marks[what.name]
-                yield from copies.checks(what.name, what.repeats, run, marks, paths, prints[:, column])
+    def _repeats(self, marked: Container[str]) -> Iterator[Check]:
+        """Whether values repeat; in `marked` series one value stands for what is missing, which is told already.
+
+        Where values are seen to be rounded, more may repeat by chance than where they are as declared.
+        """
+        for what in self.series:
+            rows, decimals = self._repeated(what, what.repeats), self._grid(what)
+            doubts = {copies.STUCK: "one value marks what is missing"} if what.name in marked else {}
+            if what.repeats is not None and decimals is not None:
+                coarser = what.repeats.on(10.0**-decimals)
+                rows = rows if coarser is None else self._repeated(what, coarser)
+                if coarser is None or coarser.length > what.repeats.length:
+                    doubts[copies.COPIED] = "values are rounded, so that so few may be there twice by chance"
+                if coarser is None:
+                    doubts[copies.STUCK] = "values are rounded, so that they may stay by chance"
+            for row in rows:
+                if row.outcome == "departs" and row.what in doubts:
+                    row.outcome, row.note = "untestable", doubts[row.what]
+                yield row
 
 
 def _note(book: dict[str, list[int]], name: str, where: NDArray, first_path: int, first_step: int) -> None:

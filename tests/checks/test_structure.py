@@ -73,3 +73,22 @@ def test_whole_numbers_are_not_taken_for_float32():
     note = looked_at(np.rint(100 * noise()))["precision"].note
     assert "rounded to whole numbers" in note
     assert "float32" not in note
+
+
+def test_values_on_a_grid_are_told_as_rounded_and_not_as_copies():
+    from tests.studies.departures import draw, spec_of, verdict
+
+    body = [{"ar": {"phi": 0.7, "sd": 2}}]
+    x = draw(spec_of(body, 500, 200, 5))["x"]
+    said = "x: structure: values are rounded to 1 decimal, which is not declared; write `decimals: 1`"
+    assert verdict(body, {"x": np.round(x, 1)}).headline == [said]
+    narrow = verdict(body, {"x": x.astype(np.float32).astype(float)}).headline[0]
+    assert narrow.endswith("(all fit in it), where float64 is declared; write `type: float32` if that is meant")
+    half = verdict(body, {"x": x.astype(np.float16).astype(float)}).headline[0]
+    assert half.startswith("x: structure: values went through float16 (all fit in it)")
+    gaps = x.copy()
+    for path in range(7):
+        gaps[9 * path, 20 * path : 20 * path + 5] = -999.0
+    rows = verdict(body, {"x": gaps}).rows
+    assert any("all of them are this value, as if it marked what is missing" in row.note for row in rows)
+    assert not any("as if stuck" in row.note for row in rows)
