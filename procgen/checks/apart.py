@@ -64,6 +64,9 @@ def checks(series: str, ends: Ends, sums: NDArray, pooled: dict[str, float]) -> 
             continue
         share = 1.0 if what == "memory" else 1.0 - 1.0 / paths  # of the variance, beside the mean of all
         found = [((z - means[what]) / math.sqrt(share), -int(path), int(n)) for z, path, n in ends[what]]
+        found = [one for one in found if math.isfinite(one[0])]  # a path that is 0 throughout has no slope
+        if not found:
+            continue
         z, path, n = max(found, key=lambda one: abs(one[0]))
         log_p = judge.of_many(_memory(z, n) if what == "memory" else tails.normal(z), paths)
         finding = Finding(0.0, z, 1.0, log_p, lambda level: judge.reach_of_worst(level, paths))
