@@ -6,6 +6,7 @@ asked for. Chances follow from each other by their ratios, outwards from the mos
 
 from __future__ import annotations
 
+from bisect import bisect_right
 from collections.abc import Callable
 from dataclasses import dataclass
 from functools import cached_property, lru_cache
@@ -23,6 +24,7 @@ Array = np.ndarray
 GRID = 2.0**52
 _SHIFT = 42
 _CELLS = 1 << (52 - _SHIFT)
+_TOGETHER = 64  # binomial laws tabled at once
 LONGEST = 1_000_000  # chances in a table
 _PER_ROOT_12 = 0.2886751345948129
 _LEAST = 2.0**-70  # a chance that no uniform sees, far from the likely ones
@@ -44,15 +46,20 @@ def _uniforms(z: Array, out: Array, scratch: Scratch) -> None:
     np.divide(np.add(out, 0.5, out=out), GRID, out=out)
 
 
+def _places(chances: Array) -> Array:
+    """P(X <= k) on the grid, of the chances of each k in order; of many laws a row each, which may end in zeros."""
+    below = np.add.accumulate(chances, axis=-1)  # one after the other, unlike a sum
+    above = np.zeros_like(chances)
+    above[..., :-1] = np.add.accumulate(chances[..., :0:-1], axis=-1)[..., ::-1]
+    return np.where(below < 0.5, np.rint(below * GRID), GRID - np.rint(above * GRID)).astype(np.int64)
+
+
 class Table:
     """P(X <= k) for k = first, first + 1 … from the chances of these numbers."""
 
     def __init__(self, chances: Array, first: int = 0):
-        below = np.add.accumulate(chances)  # one after the other, unlike a sum
-        above = np.append(np.add.accumulate(chances[:0:-1])[::-1], 0.0)
-        places = np.where(below < 0.5, np.rint(below * GRID), GRID - np.rint(above * GRID))
         self.first = first
-        self.places = places.astype(np.int64)
+        self.places = _places(chances)
 
     @cached_property
     def guide(self) -> tuple[Array, Array]:
@@ -182,21 +189,24 @@ class Thinning:
 
     def __init__(self, alpha: float, most: int):
         self.most = most
-        row, keys, self.offset = np.ones(1), [], np.zeros(most + 1, np.int64)
-        start, self.first = 0, np.zeros(most + 1, np.int64)
-        for n in range(most + 1):
-            if n:  # each of n stays or goes
-                longer = np.zeros(len(row) + 1)
-                longer[:-1] = (1.0 - alpha) * row
-                longer[1:] = longer[1:] + alpha * row
-                row = longer
-            places = Table(row).places
-            seen = np.flatnonzero((places > 0) & (places < int(GRID)))
-            low = int(np.searchsorted(places, 1))
-            self.first[n], self.offset[n] = low, start
-            keys.append(places[seen] + (n << 52))
-            start += len(seen)
-        self.keys = np.concatenate(keys)
+        row, keys, first, lengths = np.ones(1), [], [], []
+        for start in range(0, most + 1, _TOGETHER):
+            n = np.arange(start, min(start + _TOGETHER, most + 1), dtype=np.int64)
+            chances = np.zeros((len(n), n[-1] + 1))
+            for k, own in zip(n.tolist(), chances, strict=True):
+                own[: len(row)] = row
+                if k:  # each of k stays or goes
+                    own[:k] = (1.0 - alpha) * row
+                    own[1 : k + 1] = own[1 : k + 1] + alpha * row
+                row = own[: k + 1]
+            places = _places(chances)
+            seen = (places > 0) & (places < int(GRID))
+            first.append(np.count_nonzero(places < 1, axis=1))
+            lengths.append(np.count_nonzero(seen, axis=1))
+            keys.append((places + (n << 52)[:, None])[seen])
+        self.keys, self.first = np.concatenate(keys), np.concatenate(first).astype(np.int64)
+        ends = np.add.accumulate(np.concatenate(lengths))
+        self.offset = np.concatenate([np.zeros(1, np.int64), ends[:-1]])
 
     def counts(self, n: Array, u: Array) -> Array:
         """How many of n stay, for uniforms u; both of one shape, n whole and at most `most`."""
@@ -214,11 +224,30 @@ class Thinning:
             from procgen.chance.compiled_counts import thinned
 
             return out[: thinned(x, new, stay, GRID, self.keys, self.offset, self.first, out)]
+        if new.shape[1] == 1:
+            return self._moved_alone(int(x[0]), new[:, 0].tolist(), stay[:, 0])
         for t in range(len(new)):
             if x.max() > self.most:
                 return out[:t]
             x = np.add(self.counts(x, stay[t]), new[t], out=out[t])
         return out
+
+
+    @cached_property
+    def _lists(self) -> tuple[list[int], list[int]]:
+        """The keys, and for each n the place of its key that is a count of 0."""
+        return self.keys.tolist(), (self.offset - self.first).tolist()
+
+    def _moved_alone(self, x: int, new: list[float], stay: Array) -> Array:
+        """`moved` of one path, by whole numbers of Python, which are quicker than arrays of one."""
+        keys, zero = self._lists
+        out: list[int] = []
+        for place, more in zip(np.floor(stay * GRID).astype(np.int64).tolist(), new, strict=True):
+            if x > self.most:
+                break
+            x = bisect_right(keys, place + (x << 52)) - zero[x] + int(more)
+            out.append(x)
+        return np.array(out, np.float64)[:, None]
 
 
 @lru_cache(maxsize=16)

@@ -17,6 +17,7 @@ from procgen.terms.support import COUNTS
 UNIFORM = LAWS["uniform"]()
 MOST = 2000  # counts for which survivors are tabled
 LEAST = 2.0**-70
+KEPT = 63  # counts up to which the tables of survivors are kept, some 20 KiB
 
 
 class Inar(Term):
@@ -75,6 +76,7 @@ class Inar(Term):
         return Table(np.array(chances))
 
     compiles = True
+    _tables = None
 
     def draws(self):
         return (Draw("innovation", UNIFORM), Draw("thinning", UNIFORM))
@@ -109,11 +111,20 @@ class Inar(Term):
             most = 31
             while most < x.max():
                 most = 2 * most + 1  # up to 2047, for which a table has room
-            rows = thinning(self.alpha, most).moved(x, new[done:], stay[done:])
+            rows = self._thinning(most).moved(x, new[done:], stay[done:])
             out[done : done + len(rows)] = rows
             done += len(rows)
             x = out[done - 1]
         return out
+
+    def _thinning(self, most):
+        """The tables of `alpha`, kept while they are small: there may be as many terms as paths."""
+        if self._tables is None or self._tables.most != most:
+            self._tables = thinning(self.alpha, most)
+        tables = self._tables
+        if most > KEPT:
+            self._tables = None
+        return tables
 
     def unranked(self):
         return ""

@@ -41,6 +41,9 @@ def test_thinning_compiled_is_thinning_plain(alpha, most):
     plain = thinning(alpha, most).moved(x, new, stay)
     with kernel.compiling():
         assert np.array_equal(thinning(alpha, most).moved(x, new, stay), plain)
+    alone = [thinning(alpha, most).moved(x[p : p + 1], new[:, p : p + 1], stay[:, p : p + 1]) for p in range(len(x))]
+    assert all(np.array_equal(one[: len(plain), 0], plain[:, p]) for p, one in enumerate(alone))
+    assert min(map(len, alone)) == 31
     assert len(plain) == 31 and np.array_equal(plain[0], thinning(alpha, most).counts(x, stay[0]) + new[0])
 
 
