@@ -14,6 +14,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from functools import cached_property, lru_cache
+from itertools import pairwise
 from typing import Any
 
 import numpy as np
@@ -24,6 +25,8 @@ from procgen.theory.volatility import Volatility
 
 DEGREES = (16, 32, 64, 128)
 SETTLED = 1e-12  # of a Chebyshev series: its last coefficients beside its largest
+HALVINGS = 48
+NEGLIGIBLE_RATE = 1e-13  # K(q) below it is q E g but for q^2
 LARGEST_EXPONENT = 600.0
 NEGLIGIBLE = 1e-18
 FAR = 37.0  # standard deviations of a normal: the area beyond is 1e-299
@@ -187,13 +190,13 @@ class Egarch(LogVariance):
         return min((rate / slope for slope, rate in slopes if slope > 0.0), default=np.inf)
 
     @cached_property
-    def _series(self) -> tuple[np.ndarray, np.ndarray, float, float]:
+    def _series(self) -> tuple[Pieces, Pieces, float]:
         return _exponential_moments(self.law, self.alpha, self.gamma, self.centre, 2.0 if self.limit > 2.0 else 1.0)
 
     def _log_mean(self, q: np.ndarray) -> np.ndarray:
         """K(q)."""
-        bent, _, level, top = self._series
-        return np.log1p(q * level + q * q * np.polynomial.chebyshev.chebval(2.0 * q / top - 1.0, bent))
+        bent, _, level = self._series
+        return np.log1p(q * level + q * q * bent(q))
 
     def cumulants(self, q):
         q, left, total = np.asarray(q, float), 1.0, np.zeros(np.shape(q))
@@ -205,27 +208,57 @@ class Egarch(LogVariance):
                 return total
 
     def tilt(self, q):
-        _, tilted, _, top = self._series
-        return np.log(np.polynomial.chebyshev.chebval(2.0 * q / top - 1.0, tilted)) - self._log_mean(q)
+        _, tilted, _ = self._series
+        return np.log(tilted(q)) - self._log_mean(q)
+
+
+@dataclass(frozen=True)
+class Pieces:
+    """A function of q as Chebyshev series between edges; `coefficients` (degree + 1, pieces)."""
+
+    edges: np.ndarray
+    coefficients: np.ndarray
+
+    def __call__(self, q: np.ndarray) -> np.ndarray:
+        q = np.asarray(q, float)
+        at = np.clip(np.searchsorted(self.edges, q, side="right") - 1, 0, len(self.edges) - 2)
+        low, high = self.edges[at], self.edges[at + 1]
+        inside = (2.0 * q - low - high) / (high - low)
+        return np.polynomial.chebyshev.chebval(inside, self.coefficients[:, at], tensor=False)
 
 
 @lru_cache(maxsize=64)
 def _exponential_moments(law: Any, alpha: float, gamma: float, centre: float, top: float):
-    """Chebyshev series on [0, top] of (E exp(q g) - 1 - q E g) / q^2 and of E z^2 exp(q g); E g; top.
+    """(E exp(q g) - 1 - q E g) / q^2 and E z^2 exp(q g) for q in [0, top], and E g.
 
-    Unknown where the series do not settle.
+    One Chebyshev series each; or one between any two of `HALVINGS` halvings of `top`, since of a law with power tails
+    they have few derivatives at 0, but all beyond it. Unknown where the series do not settle.
     """
     z, weights = _nodes(law)
     with np.errstate(over="ignore", invalid="ignore"):  # what overflows in a heavy tail does not settle either
         g = alpha * (np.abs(z) - centre) + gamma * z
-        for degree in DEGREES:
+
+        def fitted(low: float, high: float, degree: int) -> list[np.ndarray] | None:
             x = np.cos(np.pi * (np.arange(degree + 1) + 0.5) / (degree + 1))
-            grown = np.minimum(np.outer(top * (x + 1.0) / 2.0, g), LARGEST_EXPONENT)
+            grown = np.minimum(np.outer(low + (high - low) * (x + 1.0) / 2.0, g), LARGEST_EXPONENT)
             values = _bent(grown) @ (weights * g * g), np.exp(grown) @ (weights * z * z)
-            fitted = [np.polynomial.chebyshev.chebfit(x, value, degree) for value in values]
-            if all(np.abs(c[-3:]).max() <= SETTLED * np.abs(c).max() for c in fitted):
-                return fitted[0], fitted[1], float(weights @ g), top
-    raise Unknown("its variance is too near to the edge of having this moment to be computed")
+            series = [np.polynomial.chebyshev.chebfit(x, value, degree) for value in values]
+            settled = all(np.abs(c[-3:]).max() <= SETTLED * np.abs(c).max() for c in series)
+            return series if settled or high <= NEGLIGIBLE_RATE else None
+
+        def pieces(edges: np.ndarray, degree: int) -> list[Pieces] | None:
+            found = [fitted(low, high, degree) for low, high in pairwise(edges.tolist())]
+            if any(series is None for series in found):
+                return None
+            return [Pieces(edges, np.stack([series[i] for series in found], axis=1)) for i in (0, 1)]  # type: ignore[index]
+
+        whole, halves = np.array([0.0, top]), np.concatenate([[0.0], top / 2.0 ** np.arange(HALVINGS, -1, -1)])
+        tries = [(halves, DEGREES[1])] if np.isfinite(law.highest_moment) else [(whole, degree) for degree in DEGREES]
+        for edges, degree in tries:
+            both = pieces(edges, degree)
+            if both is not None:
+                return both[0], both[1], float(weights @ g)
+    raise Unknown("it is too near to where its moments end, or of too heavy tails, for them to be computed")
 
 
 def _nodes(law: Any) -> tuple[np.ndarray, np.ndarray]:
@@ -244,7 +277,13 @@ def _nodes(law: Any) -> tuple[np.ndarray, np.ndarray]:
     if all(np.isinf(law.exponential_moments)):
         return law.shocks_from_normals(n), weights
     tail, distribution = ndtr(-np.abs(n)), law.distribution()
-    return np.where(n < 0.0, distribution.ppf(tail), distribution.isf(tail)), weights
+    z = np.where(n < 0.0, distribution.ppf(tail), distribution.isf(tail))
+    for side in (n < 0.0, n >= 0.0):  # SciPy's quantiles end, where a power law is its own asymptote
+        lost = side & ~np.isfinite(z)
+        if lost.any():
+            (last,) = np.nonzero(side & np.isfinite(z) & (tail == np.min(tail[side & np.isfinite(z)])))
+            z[lost] = z[last[0]] * (tail[last[0]] / tail[lost]) ** (1.0 / law.highest_moment)
+    return z, weights
 
 
 def _bent(x: np.ndarray) -> np.ndarray:

@@ -15,6 +15,7 @@ from procgen.theory.linear import At, Base, Linear
 from procgen.theory.logvariance import Egarch, Stochastic
 from procgen.theory.processes import Process
 from procgen.theory.sources import GARCH, SQUARES, Source, Space
+from procgen.theory.unknown import Unknown
 from procgen.theory.verdict import LEAVES_VARIANCE
 from procgen.theory.volatility import ConditionalVariance, Gjr, Volatility
 
@@ -33,6 +34,9 @@ class Volatile:
         raise NotImplementedError
 
     def _base(self, source: Source, phi: tuple[float, ...], started: bool) -> Base:
+        raise NotImplementedError
+
+    def source(self, key: str, law: Any, sd: float) -> Expression:
         raise NotImplementedError
 
     def process(self, process: Process, mean: Known | None = None) -> Expression:
@@ -113,7 +117,11 @@ class Volatile:
 
     def _volatile(self, key: str, process: Volatility, before: Sequence[float] | None) -> Expression:
         path, settles = (process.variance_path, process.settles) if process.started else (None, 0.0)
-        source = self.space.add(Source(key, GARCH, process.variance, process.law, path, settles, detail=process))
+        try:
+            variance = process.variance
+        except Unknown as unknown:  # its shocks have the mean 0 whatever their variance is
+            return opaque(self.space, (self.source(key, process.law, 1.0),), f"{key}: {unknown}", self._past(before))
+        source = self.space.add(Source(key, GARCH, variance, process.law, path, settles, detail=process))
         noise = self._noise(source, started=process.started)
         outputs = {"variance": lambda: self._conditional(source, noise)}
         return Expression(self.space, self._past(before), noise.linear, outputs=outputs)

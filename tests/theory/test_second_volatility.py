@@ -6,12 +6,16 @@ the fourth moment ends.
 
 from __future__ import annotations
 
+from itertools import pairwise
+
 import mpmath as mp
 import numpy as np
 import pytest
 from arch import arch_model
 from hypothesis import assume, given, settings
 from hypothesis import strategies as st
+from scipy.integrate import quad
+from scipy.stats import t as student_t
 
 from procgen.chance.laws import LAWS as LAWS_OF_OURS
 from procgen.theory import Axis, SeriesTheory, theory
@@ -244,3 +248,29 @@ def test_exponential_garch_from_a_given_variance():
         ]
     np.testing.assert_allclose(x.variance(np.array(steps)), exact, rtol=1e-9)
     np.testing.assert_allclose([float(x.variance(t)) for t in steps], exact, rtol=1e-9)
+
+
+@pytest.mark.parametrize("df", [3, 8])
+def test_exponential_garch_of_heavy_tails_whose_sizes_lower_the_variance(df):
+    """E h = Π E exp(βʲ g) and Cov(e²(t+1), e²(t)) by the quadrature of SciPy over its t (Nelson 1991, appendix)."""
+    unit = np.sqrt(df / (df - 2.0))
+    size = 2.0 * quad(lambda y: y * student_t.pdf(y, df), 0.0, np.inf)[0] / unit
+
+    def mean(q, power=0):
+        def integrand(y):
+            z = y / unit
+            return z**power * np.exp(q * (-0.3 * (abs(z) - size) + 0.2 * z)) * student_t.pdf(y, df)
+
+        ends = (-np.inf, -300.0, -30.0, -3.0, 0.0, 3.0, 30.0, 300.0, np.inf)
+        return sum(quad(integrand, *piece, epsabs=1e-14)[0] for piece in pairwise(ends))
+
+    def level(q):
+        return np.prod([mean(q * 0.8**j) for j in range(150)])
+
+    x = series_of(f"egarch: {{scale: 1, alpha: -0.3, gamma: 0.2, beta: 0.8, law: {{student_t: {{df: {df}}}}}}}")
+    assert x.mean(LAGS) == pytest.approx(np.zeros(len(LAGS)))
+    assert x.variance(LAGS) == pytest.approx(level(1.0), rel=1e-9)
+    assert x.autocorrelation([0, 1, 5]) == pytest.approx([1.0, 0.0, 0.0])
+    if df > 4:
+        lag_1 = mean(1.0, 2) * level(1.8) - level(1.0) ** 2
+        assert x.autocovariance_of_squares([1]) == pytest.approx(lag_1, rel=1e-8)
