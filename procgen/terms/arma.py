@@ -10,8 +10,9 @@ import numpy as np
 from procgen.chance.kernel import kernel
 from procgen.spec.declare import Parameter, Reals, Record
 from procgen.terms.base import LAW, SD, TOTAL_SD, Ahead, Term, Unknown, number, rows, signed, stated, without_gap
-from procgen.terms.rows import Unlike, alike, plain, row_in
-from procgen.terms.start import JointStart, Member, companion, decay_length, partial_autocorrelations
+from procgen.terms.burnt import burnt
+from procgen.terms.rows import Unlike, alike, of_path, plain, row_in
+from procgen.terms.start import DENSE, JointStart, Member, companion, decay_length, partial_autocorrelations
 
 FORGOTTEN = 1e-9
 LONGEST = 5_000  # coefficients
@@ -139,9 +140,16 @@ class Arma(Term):
 
     @cached_property
     def _memory(self):
-        if row_in(self.phi):
-            raise Unlike("each path has a burn-in of its own")
-        return decay_length(companion(self.phi, (), len(self.phi), 0)[0])
+        return max(self._memories)
+
+    @cached_property
+    def _memories(self):
+        """Of every path where coefficients are rows, and of all paths otherwise."""
+        paths = row_in(self.phi)
+        if paths and len(self.phi) > DENSE:
+            raise Unlike("long autoregressions start from predictors of their own")
+        each = [of_path(self.phi, path) for path in range(paths)] or [self.phi]
+        return [decay_length(companion(phi, (), len(phi), 0)[0]) for phi in each]
 
     def reach(self, head):
         if self.before is not None:
@@ -166,15 +174,29 @@ class Arma(Term):
     def _burn_in(self, before):
         """From the exact covariance far enough back, then through the shocks to step 0."""
         p, q = len(self.phi), len(self.theta)
+        if row_in(self.phi):
+            return self._burnt_by_rows(before)
         (count,) = self.reach(before.head)
         a = before.inputs[0][len(before.inputs[0]) - count :]
         state = {"x": np.zeros((0, 1)), "a": a[:q]}
         if p:
-            member = self._member(self.shock_scale)
-            z = [row / self.shock_scale for row in a[:q][::-1]] + list(before.normals(p))
-            state["x"] = JointStart([member], np.ones((1, 1))).settle(z)[::-1]
+            state["x"] = self._settled(a[:q], before.normals(p))
         x, state = self.recurse((a[q:],), state, None)
         return x[len(x) - before.head :], state
+
+    def _settled(self, a, normals):
+        """As many values as the filter has coefficients, oldest first, beside the shocks `a` of the same steps."""
+        z = [row / self.shock_scale for row in a[::-1]] + list(normals)
+        return JointStart([self._member(self.shock_scale)], np.ones((1, 1))).settle(z)[::-1]
+
+    def _burnt_by_rows(self, before):
+        """`_burn_in` of paths that each begin as far back as their own coefficients ask for."""
+        a, q, paths = before.inputs[0], len(self.theta), np.arange(len(self._memories))
+        lengths = np.maximum(np.array(self._memories), before.head)
+        past = np.array([a[len(a) - lengths - q + k, paths] for k in range(q)]).reshape(q, len(paths))
+        rest = {"x": self._settled(past, before.normals(len(self.phi))), "a": past}
+        values, state = burnt(self, lengths, rest, before.head, a)
+        return np.zeros((0, len(paths))) if values is None else values[""], state
 
     def recurse(self, inputs, state, at):
         a = inputs[0]

@@ -12,20 +12,8 @@ from typing import Any
 import numpy as np
 
 from procgen.terms.base import Array, Node, State, Term
-from procgen.terms.conditional import BURN_TILE, Conditional
-from procgen.terms.graph import Source
 
-
-def can_burn_together(stack: Any, nodes: Sequence[Node]) -> bool:
-    """Whether the nodes of several paths, which one stack stands for, begin by a burn-in that can run side by side."""
-    first = nodes[0]
-    lone = len(first.inputs) == 1 and isinstance(first.inputs[0], Source) and first.inputs[0].group is None
-    return (
-        stack.one is not None
-        and isinstance(first.term, Conditional)
-        and lone
-        and all(node.term.before is None and node.head == first.head for node in nodes)
-    )
+BURN_TILE = 128  # steps of a burn-in drawn at once, few enough to stay in cache
 
 
 def burnt_by_nodes(
@@ -34,11 +22,25 @@ def burnt_by_nodes(
     """`burnt` of the term that a stack of nodes runs as."""
     head = nodes[0].head
     lengths = np.repeat([node.term.reach(head)[0] for node in nodes], np.diff(stack.edges))
-    return burnt(stack.one, lengths, stack.gathered([node.term.rest() for node in nodes]), head, draw)
+    rest = stack.gathered([node.term.rest() for node in nodes])
+    return burnt(stack.one, lengths, rest, head, _Drawn(int(lengths.max()), draw))
+
+
+class _Drawn:
+    """Rows before step 0 that are drawn slice by slice."""
+
+    def __init__(self, count: int, draw: Callable[[int, int], Array]):
+        self._count, self._draw = count, draw
+
+    def __len__(self) -> int:
+        return self._count
+
+    def __getitem__(self, rows: slice) -> Array:
+        return self._draw(rows.start - self._count, rows.stop - rows.start)
 
 
 def burnt(
-    term: Any, lengths: Array, rest: State, head: int, draw: Callable[[int, int], Array]
+    term: Any, lengths: Array, rest: State, head: int, shocks: Any
 ) -> tuple[dict[str, Array] | None, State]:
     """Values at the `head` steps before step 0, by output, and the state of all paths after them.
 
@@ -47,7 +49,7 @@ def burnt(
     term : whose numbers are rows, one value a path
     lengths : (paths,), the steps of each burn-in, at least `head`
     rest : the state that they begin from, each (n, paths)
-    draw : draw(first_step, steps) gives the shocks of all paths
+    shocks : the rows before step 0 of all paths, at least as many as the longest has steps
     """
     order = np.argsort(-lengths, kind="stable")
     rest = {name: rows[:, order] for name, rows in rest.items()}
@@ -55,7 +57,7 @@ def burnt(
     state, joined, active, kept = {name: rows[:, :0] for name, rows in rest.items()}, 0, term, []
     for first in range(-int(sorted_lengths[0]), 0, BURN_TILE):
         end = min(first + BURN_TILE, 0)
-        z = draw(first, end - first)[:, order]
+        z = shocks[len(shocks) + first : len(shocks) + end][:, order]
         joining = np.unique(-sorted_lengths[(sorted_lengths <= -first) & (sorted_lengths > -end)]).tolist()
         for start, stop in zip(cuts := sorted({first, *joining}), [*cuts[1:], end], strict=True):
             count = int(np.searchsorted(-sorted_lengths, start, side="right"))
@@ -64,7 +66,8 @@ def burnt(
                 joined, active = count, chosen(term, slice(count), len(order))
             values, state = active.recurse((z[start - first : stop - first, :count],), state, None)
             if stop > -head:  # by then all have joined
-                kept.append({name: rows[max(-head - start, 0) :] for name, rows in values.items()})
+                outputs = values if isinstance(values, dict) else {"": values}
+                kept.append({name: rows[max(-head - start, 0) :] for name, rows in outputs.items()})
     back = np.argsort(order, kind="stable")
     state = {name: rows[:, back] for name, rows in state.items()}
     if not head:

@@ -19,7 +19,7 @@ from procgen.spec.entries import walk
 from procgen.spec.model import Entry, Series, Shared
 from procgen.terms import catalogue
 from procgen.terms.base import Array, Node, State
-from procgen.terms.burnt import burnt, burnt_by_nodes, can_burn_together
+from procgen.terms.burnt import burnt_by_nodes
 from procgen.terms.combine import Hidden
 from procgen.terms.conditional import Conditional
 from procgen.terms.graph import Graph, Source
@@ -28,6 +28,8 @@ from procgen.terms.run import Run
 from procgen.terms.stack import Stack
 from procgen.terms.varied import Varied
 
+# Numbers that say how far back a filter is drawn: a shock that burns in itself begins from there, on each path.
+DEEP = frozenset({"phi", "rate"})
 FEW = 16  # steps before step 0 that are drawn for all paths at once
 
 
@@ -87,24 +89,16 @@ class PartRun(Run):
             values[id(member)] = self._of_whole(rows)
 
 
-class RowRun(Run):
-    """The run of a graph whose numbers are rows, one value a path."""
-
-    def _begin_node(self, node: Node) -> None:
-        term = node.term
-        if not (isinstance(term, Conditional) and row_in(term.values) and term.before is None):
-            super()._begin_node(node)
-            return
-        shocks, rest = self._begun[id(node.inputs[0])], np.zeros(self.paths)
-        values, self._states[node.key] = burnt(
-            term,
-            np.maximum(np.array(term.burns), node.head),
-            {name: rows + rest for name, rows in term.rest().items()},
-            node.head,
-            lambda first, steps: shocks[len(shocks) + first : len(shocks) + first + steps],
-        )
-        for name, rows in (values or {}).items():
-            self._begun[id(node) if name == "" else (id(node), name)] = rows
+def can_burn_together(stack: Any, nodes: Sequence[Node]) -> bool:
+    """Whether the nodes of several paths, which one stack stands for, begin by a burn-in that can run side by side."""
+    first = nodes[0]
+    lone = len(first.inputs) == 1 and isinstance(first.inputs[0], Source) and first.inputs[0].group is None
+    return (
+        stack.one is not None
+        and isinstance(first.term, Conditional)
+        and lone
+        and all(node.term.before is None and node.head == first.head for node in nodes)
+    )
 
 
 def graph_by_rows(varied: Varied, rows: dict[str, Array]) -> Graph | None:
@@ -114,9 +108,11 @@ def graph_by_rows(varied: Varied, rows: dict[str, Array]) -> Graph | None:
     if not all(_takes_rows(entry) for body in bodies for entry, _ in walk(body.of)):
         return None
     try:
-        return Graph(spec, factors=True)
+        graph = Graph(spec, factors=True)
     except Unlike:
         return None
+    # States that a correlation follows are drawn from as far back as each path's own shocks.
+    return None if any(group.by is not None for group in graph.groups) else graph
 
 
 def _takes_rows(entry: Entry) -> bool:
@@ -125,6 +121,8 @@ def _takes_rows(entry: Entry) -> bool:
     names = {name for name, value in entry.values.items() if row_in(value)}
     if not names and not shock:
         return True
+    if names & DEEP and entry.shock is not None and entry.shock.kind != "white_noise":
+        return False
     kind = catalogue()[entry.kind]
     return kind.begins_by_rows and names <= set(kind.by_rows)
 
@@ -142,8 +140,9 @@ class ByPath:
         self._runs: list[PartRun] = []
         self._nodes: list[tuple[Node, list[Node]]] = []
         together = graph_by_rows(self._varied, self._rows) if len(self._edges) > 2 else None
+        self.together = together is not None
         if together is not None:
-            self._whole: Run = RowRun(together, first_path, paths, reveal)
+            self._whole = Run(together, first_path, paths, reveal)
             return
         self._whole = Run(self._make(0), first_path, paths, reveal)
         with uncollected():

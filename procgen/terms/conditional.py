@@ -10,10 +10,10 @@ import numpy as np
 
 from procgen.spec.declare import Flag, Parameter, Real, Reals, Record
 from procgen.terms.base import Draw, Term, rows, stated
-from procgen.terms.rows import each_path
+from procgen.terms.burnt import BURN_TILE, burnt
+from procgen.terms.rows import each_path, row_in
 
 FORGOTTEN = 1e-9
-BURN_TILE = 128  # steps of a burn-in drawn at once, few enough to stay in cache
 OMEGA = Parameter("omega", "ω", Real(above=0), "the constant in the variance", default=None, unit="series²")
 SD = Parameter(
     "sd", "σ", Real(above=0), "unconditional standard deviation, instead of `omega`", default=None, unit="series"
@@ -22,7 +22,7 @@ INFINITE = Parameter(
     "allow_infinite_variance",
     "",
     Flag(),
-    "run a strictly stationary garch without a variance on purpose",
+    "run it on purpose where it is strictly stationary but has no variance",
     default=False,
 )
 BEFORE = Parameter(
@@ -82,6 +82,10 @@ class Conditional(Term):
             h, past = rows(self.before["variance"]), rows(self.before["shocks"])
             values = {"": past[len(past) - before.head :], "variance": h[len(h) - before.head :]}
             return values, self.left()
+        if paths := row_in(self.values):
+            lengths = np.maximum(np.array(self.burns), before.head)
+            rest = {name: state + np.zeros(paths) for name, state in self.rest().items()}
+            return burnt(self, lengths, rest, before.head, before.inputs[0])
         return self._burnt_in(before, self.rest())
 
     def _burnt_in(self, before, state):

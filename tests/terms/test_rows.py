@@ -10,7 +10,7 @@ from procgen.chance.laws import LAWS
 from procgen.chance.portable import cholesky
 from procgen.spec.reader import read_raw
 from procgen.terms import catalogue
-from procgen.terms.by_path import RowRun, run, varied_of
+from procgen.terms.by_path import run, varied_of
 from procgen.terms.graph import Graph, build
 from procgen.terms.rows import alike, each_path, row_in
 from procgen.terms.run import Run
@@ -37,6 +37,9 @@ BODIES = {
     "arma": [{"arma": {"phi": [0.5, drawn(-0.3, 0.3)], "theta": 0.3, "total_sd": drawn(1, 3)}}],
     "ma not normal": [lagged(2, {"ma": {"theta": [drawn(0.1, 0.5), 0.2], "sd": drawn(1, 2), "law": STUDENT}})],
     "ar not normal": [{"ar": {"phi": [0.5, 0.2], "sd": drawn(1, 2), "law": STUDENT}}],
+    "ar burning in": [lagged(3, {"ar": {"phi": [drawn(-0.3, 0.5), drawn(-0.4, 0.4)], "sd": 1.0, "law": STUDENT}})],
+    "arma burning in": [{"arma": {"phi": drawn(0.1, 0.9), "theta": [drawn(0.1, 0.4), 0.2], "law": STUDENT, "sd": 1}}],
+    "pulled burning in": [{"ornstein_uhlenbeck": {"rate": drawn(0.1, 2), "sd": drawn(1, 2), "law": STUDENT}}],
     "walk": [lagged(3, {"random_walk": {"sd": drawn(0.1, 1), "drift": drawn(-1, 1), "start": drawn(-3, 3)}})],
     "walk of garch": [{"random_walk": {"drift": drawn(0, 1), "shock": GARCH}}],
     "ar of garch": [lagged(2, {"ar": {"phi": 0.6, "shock": GARCH}})],
@@ -73,7 +76,7 @@ def assert_as_alone(raw):
     graph = build(read_raw({"seed": 3, "paths": 20, "time": {"steps": STEPS}, **raw}, catalogue(), LAWS))
     runner = run(graph, FIRST, PATHS)
     tiles = [runner.tile(5), runner.tile(STEPS - 5)]
-    assert isinstance(runner._whole, RowRun)
+    assert runner.together
     rows = varied_of(graph).rows(FIRST, PATHS)
     for p in range(PATHS):
         own = Graph(varied_of(graph).at({key: float(row[p]) for key, row in rows.items()}))
@@ -103,11 +106,17 @@ def test_one_graph_is_made_for_all_paths(monkeypatch):
     assert len(made) == 1
 
 
-def test_a_term_that_begins_path_by_path_still_does():
-    """An autoregression that burns in, for each path as long as its own coefficient asks for."""
-    body = [{"ar": {"phi": drawn(0.2, 0.9), "shock": {"gjr_garch": {"sd": 1.0, "alpha": 0.1, "gamma": 0.1}}}}]
-    graph = build(read_raw({"seed": 3, "paths": 4, "time": {"steps": 3}, "series": {"x": body}}, catalogue(), LAWS))
-    assert not isinstance(run(graph, 0, 4)._whole, RowRun)
+@pytest.mark.parametrize(
+    "entry",
+    [
+        {"gjr_garch": {"sd": 1.0, "alpha": drawn(0.1, 0.2), "gamma": 0.1}},
+        {"ar": {"phi": drawn(0.1, 0.9), "shock": GARCH}},  # the garch begins where its reader does, on each path
+    ],
+)
+def test_a_term_that_begins_path_by_path_still_does(entry):
+    raw = {"seed": 3, "paths": 4, "time": {"steps": 3}, "series": {"x": [entry]}}
+    graph = build(read_raw(raw, catalogue(), LAWS))
+    assert not run(graph, 0, 4).together
 
 
 def test_a_factor_of_many_covariances_is_that_of_each():

@@ -11,7 +11,7 @@ from procgen.spec.model import SpecError
 from procgen.spec.reader import read_raw
 from procgen.spec.varying import varying_of
 from procgen.terms import catalogue
-from procgen.terms.by_path import RowRun, run, varied_of
+from procgen.terms.by_path import run, varied_of
 from procgen.terms.graph import Graph, build
 from procgen.terms.run import Run
 from procgen.terms.stack import Stack
@@ -91,17 +91,20 @@ def test_every_number_of_a_term_may_vary(name, at):
             assert np.array_equal(found, run(graph, 0, PATHS).tile(STEPS)["x"])
 
 
-@pytest.mark.parametrize("name", ["noise", "ar1", "ar2", "ma", "walk", "ou", "garch", "trend", "season"])
+@pytest.mark.parametrize("name", ["noise", "ar1", "ar2", "ma", "walk", "ou", "garch", "trend", "season", "ar_student"])
 def test_these_begin_and_run_as_rows(name):
     at = next(iter(places(BODIES[name])))
-    assert isinstance(run(build(spec_of(varied(BODIES[name], at))), 0, PATHS)._whole, RowRun)
+    assert run(build(spec_of(varied(BODIES[name], at))), 0, PATHS).together
 
 
-@pytest.mark.parametrize("name", ["ar_student", "arma_garch"])
-def test_these_begin_path_by_path_and_run_as_rows(name):
-    at = next(iter(places(BODIES[name])))
-    runner = run(build(spec_of(varied(BODIES[name], at))), 0, PATHS)
-    stacks = [node.term for node, _ in runner._nodes]
+@pytest.mark.parametrize("name", ["noise", "ar1", "garch", "ar_student"])
+def test_these_run_as_rows_beside_one_that_begins_path_by_path(name):
+    """Here a garch with a threshold: then all paths have graphs of their own."""
+    body = varied(BODIES[name], next(iter(places(BODIES[name]))))
+    series = {"x": [body], "y": [varied(BODIES["gjr"], ("gjr_garch", "alpha"))]}
+    raw = {"seed": 3, "paths": PATHS, "time": {"steps": STEPS}, "series": series}
+    runner = run(build(read_raw(raw, catalogue(), LAWS)), 0, PATHS)
+    stacks = [node.term for node, _ in runner._nodes if node.name.startswith("x.")]
     assert stacks and all(isinstance(stack, Stack) and stack.one is not None for stack in stacks)
 
 
@@ -109,7 +112,7 @@ def test_the_search_for_cycles_goes_on_after_the_graphs_are_made():
     import gc
 
     assert gc.isenabled()
-    runner = run(build(spec_of(varied(BODIES["ar_student"], next(iter(places(BODIES["ar_student"])))))), 0, PATHS)
+    runner = run(build(spec_of(varied(BODIES["gjr"], next(iter(places(BODIES["gjr"])))))), 0, PATHS)
     assert gc.isenabled()
     runner.tile(3)
     assert gc.isenabled()
