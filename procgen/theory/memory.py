@@ -13,6 +13,7 @@ from procgen.theory.unknown import Unknown
 
 LONGEST_PARTIAL = 20_000  # lags: the recursion takes the square of their number
 LONGEST_SEARCH = 1 << 15  # lags among which a half-life is looked for where they do not die out
+HALF = 0.5 + 1e-9  # what is one half but for rounding does not exceed it
 LOST = 1e10  # magnification of rounding errors up to which partial autocorrelations are given
 
 
@@ -85,7 +86,7 @@ def searched_half_life(autocovariance: Callable[[np.ndarray], np.ndarray]) -> in
 def _half_life(gamma: np.ndarray) -> int:
     if gamma[0] <= 0.0:
         raise Unknown("the variance is 0")
-    return int(np.flatnonzero(np.abs(gamma) > gamma[0] / 2.0)[-1]) + 1
+    return int(np.flatnonzero(np.abs(gamma) > HALF * gamma[0])[-1]) + 1
 
 
 def _refuse_unsettled(gamma: np.ndarray) -> None:
@@ -93,8 +94,8 @@ def _refuse_unsettled(gamma: np.ndarray) -> None:
     if not np.isfinite(gamma).all():
         raise OverflowError
     late = np.abs(gamma[len(gamma) // 2 :])
-    if late.max() > abs(gamma[0]) / 2.0:
-        at = len(gamma) // 2 + int(np.flatnonzero(late > abs(gamma[0]) / 2.0)[-1])
+    if late.max() > HALF * abs(gamma[0]):
+        at = len(gamma) // 2 + int(np.flatnonzero(late > HALF * abs(gamma[0]))[-1])
         left = gamma[at] / gamma[0]
         raise Unknown(f"looked for up to lag {len(gamma) - 1}; at lag {at} the autocorrelation is still {left:.3g}")
 

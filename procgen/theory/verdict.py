@@ -80,9 +80,11 @@ def judge(x: Expression) -> Stationarity:
     reasons = [reason for v in ORDER for reason in found.get(v, ())] + findings.notes
     if not x.parts and verdict == STRICT:
         reasons.append("a constant")
+    lasting = any(source.kind == PROCESS for source in x.sources)  # such as a chain, whose start is drawn once
+    same = "its joint law is the same" if lasting else "the same function of independent shocks"
     return Stationarity(
         verdict,
-        tuple(dict.fromkeys(reasons)) or ("the same function of independent shocks at every step",),
+        tuple(dict.fromkeys(reasons)) or (f"{same} at every step",),
         stationary=not set(found) - {WEAK},
         covariance_stationary=not set(found) - {WEAK, MEAN},
         strict_deviations=not set(found) - {MEAN},

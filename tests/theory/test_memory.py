@@ -151,6 +151,17 @@ def test_squares_of_a_gaussian_and_of_a_garch():
     assert "infinite fourth moment" in heavy.reason("autocorrelation_of_squares")
 
 
+def test_one_half_itself_does_not_exceed_one_half():
+    """Deviations of a level and of noise alike: the intraclass correlation of the textbook is 1/2 at every lag."""
+    level = {"draw": {"normal": {"mean": 0, "sd": 1}}, "over": "path"}
+    x = series_of({"white_noise": {"sd": 1}}, {"constant": level})
+    assert x.half_life == 1
+    turns = [[0, 1, 0], [0, 0, 1], [1, 0, 0]]  # three states in turn: correlations 1, -1/2, -1/2
+    turning = series_of({"chain": {"states": ["a", "b", "c"], "transitions": turns}})
+    assert turning.half_life is None and turning.reason("half_life").endswith("the autocorrelation is still 1")
+    assert turning.stationarity.reasons == ("its joint law is the same at every step",)
+
+
 def test_wrong_counts_are_refused():
     x = series_of({"white_noise": {"sd": 1}})
     with pytest.raises(ValueError, match=r"expected whole numbers of steps from 1 on, got \[0\]"):
