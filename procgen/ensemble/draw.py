@@ -93,10 +93,15 @@ def _not_finite(
     column: Column, values: np.ndarray, wrong: np.ndarray, first_path: int, first_step: int
 ) -> EnsembleError:
     step, path = np.argwhere(wrong)[0]
+    where = f"series {column.name}: the value at path {first_path + path}, step {first_step + step}"
+    if np.isnan(values[step, path]):
+        return EnsembleError(
+            f"{where} is not a number: a logit got what is not between its low and high, or two infinities met; hold "
+            "the body of a logit within its levels (by clip, or levels further apart), what explodes to fewer steps"
+        )
     return EnsembleError(
-        f"series {column.name}: the value at path {first_path + path}, step {first_step + step} is "
-        f"{values[step, path]}, not a finite number; the process explodes or overflows there: "
-        "ask for fewer steps, or make it stationary"
+        f"{where} is {values[step, path]}, not a finite number: it is beyond 1.8e308; make smaller what exp, power or "
+        "product get, make what explodes stationary, or ask for fewer steps"
     )
 
 

@@ -337,11 +337,13 @@ class Graph:
 def build(spec: Spec) -> Graph:
     """The graph of a checked spec; where parameters vary by path, with their medians, and `varied` has them all."""
     from procgen.terms.past import refuse_varying
+    from procgen.terms.supports import refuse_outside
 
     varied = Varied(spec)
     refuse_varying(varied.spec)
     graph = Graph(varied.typical if varied.parameters else varied.spec)
     graph.varied = varied
+    refuse_outside(graph)
     return graph
 
 

@@ -6,11 +6,39 @@ import math
 from functools import lru_cache
 from typing import Any
 
-from procgen.terms.combine import Hidden
+from procgen.spec.model import Fault, SpecError
+from procgen.terms.base import Node, number
+from procgen.terms.combine import Exp, Hidden
 from procgen.terms.misfits import gaps_of
+from procgen.terms.shape import Logit
 from procgen.terms.support import EVERYTHING, Support
 
+LARGEST_EXPONENT = 709.0
 LARGEST = 2.0**53  # up to here every whole number is a float64
+
+
+def refuse_outside(graph: Any) -> None:
+    """SpecError when a logit gets only what is not between its levels, or a value is beyond double precision."""
+    if graph.varied is not None and graph.varied.parameters:
+        return
+    for node in graph.order(graph.owned()):
+        if not isinstance(node, Node):
+            continue
+        if isinstance(node.term, Logit):
+            body, low, high = support_of(node.inputs[0]), float(node.term.low), float(node.term.high)
+            if body.low >= high or body.high <= low:
+                got = number(body.low) if body.low == body.high else f"what is never below {number(body.low)}"
+                if body.high <= low and body.low != body.high:
+                    got = f"what is never above {number(body.high)}"
+                levels = f"{number(low)} and {number(high)}"
+                message = f"{node.name} needs a body between its levels {levels}, got {got}; move `low` or `high`"
+                raise SpecError((Fault(node.place, message),))
+        if isinstance(node.term, Exp) and (lowest := support_of(node.inputs[0]).low) > LARGEST_EXPONENT:
+            message = (
+                f"{node.name} needs a body below {number(LARGEST_EXPONENT)}, whose exponential a float64 can hold, got "
+                f"{number(lowest)} or more; subtract a level from it"
+            )
+            raise SpecError((Fault(node.place, message),))
 
 
 def column_type(graph: Any, name: str) -> str:

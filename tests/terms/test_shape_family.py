@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import re
+
 import numpy as np
 import pandas as pd
 import pytest
@@ -166,3 +168,17 @@ def test_a_season_shorter_than_two_steps_is_refused():
     with pytest.raises(pg.SpecError, match=r"expected a period of at least 2 steps, .* got 0.125; take a longer"):
         pg.load(spec("3h"))
     assert pg.render(pg.load(spec("2d")))["x"][0].tolist() == [3, -3, 3, -3, 3, -3]
+
+
+@pytest.mark.parametrize(
+    ("body", "says"),
+    [
+        ("logit: [{constant: 1}]", "x.logit needs a body between its levels 0 and 1, got 1"),
+        ("logit: {of: [{poisson: {mean: 3}}, {constant: 2}], high: 2}", "levels 0 and 2, got what is never below 2"),
+        ("exp: [{constant: 800}]", "x.exp needs a body below 709"),
+    ],
+)
+def test_what_no_value_can_come_of_is_refused_before_it_is_drawn(body, says):
+    """The log odds of 1 are infinite (Berkson 1944), and so is exp(800) in double precision (IEEE 754)."""
+    with pytest.raises(SpecError, match=re.escape(says)):
+        graph_of(f"  x: {{{body}}}")
