@@ -250,7 +250,7 @@ class Axis(Volatile, Stating):
             whole = known.whole(("of", self.name, path.key), lambda t: f(path.at(t)), path.periods, note)
             return Expression(self.space, whole)
         if not is_gaussian(x):
-            return self._given_up(x, "a function with a bend of what is not Gaussian has no closed moments")
+            return self._given_up(x, "moments of a bend are not worked out for a body that is not Gaussian")
         steady = judge(x).covariance_stationary
         if steady and x.mean_path.value is not None:
             return self.process(process, known.constant(float(process.mean(np.zeros(1, np.int64))[0])))

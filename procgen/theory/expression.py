@@ -96,7 +96,7 @@ class Expression:
     def exp(self) -> Expression:
         """The exponential of the series; opaque unless the series is linear."""
         if self.terms:
-            return opaque(self.space, (self,), "an exponential of what is not linear has no closed moments")
+            return opaque(self.space, (self,), "moments of an exponential of products are not worked out")
         level = self.mean_path.exp()
         if not self.linear:
             return Expression(self.space, level)

@@ -52,6 +52,9 @@ def marginal(x: Expression, step: int) -> Any:
         from procgen.theory.stable import stable_sum
 
         return stable_sum(x, step)
+    for source in x.sources:
+        if source.kind == OPAQUE:
+            raise Unknown(source.reason)
     if any(source.kind == PROCESS and source.detail.discrete for source in x.sources):
         from procgen.theory.mixtures import normals_at
 

@@ -114,3 +114,21 @@ def test_the_bounded_side_of_a_skewed_law_has_no_end():
 def test_what_is_finite_and_not_worked_out_is_not_said_to_have_no_closed_form():
     x = exponential_of({"white_noise": {"sd": 1, "law": {"ged": {"shape": 1.5}}}})
     assert x.mean(NOW) is None and "finite, but not worked out" in x.reason("mean")
+
+
+@pytest.mark.parametrize(
+    "body",
+    [
+        {"min": {"of": [{"flag": {"share": 0.2, "stay": 8}}], "and": [{"constant": 0.5}]}},
+        {"clip": {"of": [{"poisson": {"mean": 3}}], "high": 2}},
+    ],
+)
+def test_a_bend_of_counts_is_not_worked_out_which_is_not_to_have_no_closed_form(body):
+    x = series_of(body)
+    assert x.mean(NOW) is None and "not worked out" in x.reason("mean")
+    assert x.marginal(0) is None and x.reason("marginal")
+
+
+def test_the_law_of_a_bend_of_what_is_skewed_has_the_reason_of_its_moments():
+    x = series_of({"clip": {"of": [{"white_noise": {"sd": 1, "law": "laplace"}}], "high": 2}})
+    assert x.marginal(0) is None and "not worked out" in x.reason("marginal")
