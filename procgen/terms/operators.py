@@ -18,7 +18,7 @@ class Lag(Term):
     purpose = "its body as it was some steps earlier; before step 0 it reads the body's own past"
     source = "common practice, no source"
     example = "lag: {of: [{ar: {phi: 0.8, sd: 1}}], by: 3}"
-    knows = "whatever is known of its body, shifted"
+    knows = "whatever is known of its body, shifted; walks are followed backwards at random before step 0"
     composition = True
     parameters = (
         OF,

@@ -33,7 +33,7 @@ class Brownian(Term):
     purpose = "a price whose logarithm is a random walk, and whose mean grows at a rate that is stated"
     source = "Samuelson (1965); Black & Scholes (1973)"
     example = "geometric_brownian_motion: {drift: {value: 0.08, per: year}, sd: {value: 0.2, per: year}, start: 100}"
-    knows = "mean, covariance and lognormal law at any steps"
+    knows = "mean, covariance and lognormal law at any steps; before step 0 it is followed backwards at random"
     correlates = True
     parameters: ClassVar[tuple[Parameter, ...]] = (DRIFT, SD, START)
 

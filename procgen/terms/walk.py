@@ -24,7 +24,7 @@ class RandomWalk(Term):
     purpose = "the running sum of shocks: x[0] is `start`, and the variance at step t is t·σ²"
     source = "Box & Jenkins (1970), ch. 4; Hamilton (1994), ch. 15"
     example = "random_walk: {sd: 0.01, drift: -0.00005, start: 3.9}"
-    knows = "mean and covariance at any steps"
+    knows = "mean and covariance at any steps; what reads it before step 0 finds it followed backwards at random"
     takes_shock = True
     by_rows = ("sd", "drift", "start")
     begins_by_rows = True

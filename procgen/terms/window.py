@@ -74,7 +74,7 @@ class RollingMean(Term):
     purpose = "the mean of its body over the last steps, this one among them; before step 0 it reads its past"
     source = "common practice, no source"
     example = "rolling_mean: {of: [{ar: {phi: 0.8, sd: 1}}], over: 7}"
-    knows = "whatever is known of its body, averaged"
+    knows = "whatever is known of its body, averaged; a walk before step 0 is followed backwards at random"
     composition = True
     parameters = (OF, Parameter("over", "k", Span(), "how long the window is", unit="steps"))
 
