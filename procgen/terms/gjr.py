@@ -19,6 +19,7 @@ from procgen.terms.conditional import (
     burn_without_variance,
     left_from,
 )
+from procgen.terms.rows import plain
 from procgen.terms.start import companion, decay_length
 
 
@@ -47,6 +48,8 @@ class GjrGarch(Conditional):
     purpose = "white shocks whose variance follows the square before, more so after a negative shock"
     source = "Glosten, Jagannathan & Runkle (1993); moments: He & Teräsvirta (1999)"
     example = "gjr_garch: {sd: 1.1, alpha: 0.03, gamma: 0.08, beta: 0.87}"
+    by_rows = ("omega", "sd", "alpha", "gamma", "beta")
+    begins_by_rows = True
     parameters: ClassVar[tuple[Parameter, ...]] = (
         OMEGA,
         SD,
@@ -89,14 +92,14 @@ class GjrGarch(Conditional):
 
     def resting(self):
         """A variance to begin from, which is forgotten: the unconditional one of a law that is not skewed."""
-        return self.level() / max(1.0 - self._even(), 2.0**-20)
+        return self.level() / plain(np.maximum(1.0 - self._even(), 2.0**-20))
 
     def _even(self):
         return self.alpha + self.beta + self.gamma / 2.0
 
     def scale(self):
         """Standard deviation, in the series' unit."""
-        return float(np.sqrt(self.resting()))
+        return plain(np.sqrt(self.resting()))
 
     def burn(self):
         """Steps until the variance has forgotten where it began, to 1e-12."""
@@ -114,10 +117,10 @@ class GjrGarch(Conditional):
         return self.level() + (self.alpha + (self.gamma if e < 0 else 0.0)) * (e * e) + self.beta * h
 
     def rest(self):
-        return {"h": np.full((1, 1), self.resting())}
+        return {"h": np.zeros((1, 1)) + self.resting()}
 
     def left(self):
-        return {"h": np.full((1, 1), self.first())}
+        return {"h": np.zeros((1, 1)) + self.first()}
 
     def _coefficients(self):
         return self.level(), self.alpha, self.gamma, self.beta

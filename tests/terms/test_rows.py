@@ -47,6 +47,13 @@ BODIES = {
     "garch without variance": [
         {"garch": {"omega": 0.1, "alpha": drawn(0.1, 0.4), "beta": drawn(0.5, 0.65), "allow_infinite_variance": True}}
     ],
+    "threshold": [
+        lagged(3, {"gjr_garch": {"sd": drawn(1, 2), "alpha": drawn(0.05, 0.1), "gamma": drawn(0, 0.1), "beta": 0.7}})
+    ],
+    "threshold from a past": [
+        {"gjr_garch": {"omega": drawn(0.1, 1), "alpha": 0.1, "gamma": drawn(0, 0.1), "beta": drawn(0.5, 0.7),
+                       "before": {"variance": [2.0], "shocks": [-1.0]}}}
+    ],
     "arch": [{"arch": {"omega": drawn(0.1, 1), "alpha": drawn(0.1, 0.8)}}],
     "spread": [{"white_noise": {"spread": drawn(1, 2), "law": {"stable": {"alpha": 1.5}}}}],
     "pulled": [lagged(3, {"ornstein_uhlenbeck": {"rate": drawn(0.01, 2), "mean": drawn(-2, 2), "total_sd": 1.5}})],
@@ -109,7 +116,7 @@ def test_one_graph_is_made_for_all_paths(monkeypatch):
 @pytest.mark.parametrize(
     "entry",
     [
-        {"gjr_garch": {"sd": 1.0, "alpha": drawn(0.1, 0.2), "gamma": 0.1}},
+        {"stochastic_volatility": {"sd": 1.0, "phi": drawn(0.1, 0.9), "eta": 0.3}},
         {"ar": {"phi": drawn(0.1, 0.9), "shock": GARCH}},  # the garch begins where its reader does, on each path
     ],
 )

@@ -91,7 +91,10 @@ def test_every_number_of_a_term_may_vary(name, at):
             assert np.array_equal(found, run(graph, 0, PATHS).tile(STEPS)["x"])
 
 
-@pytest.mark.parametrize("name", ["noise", "ar1", "ar2", "ma", "walk", "ou", "garch", "trend", "season", "ar_student"])
+BY_ROWS = ["noise", "ar1", "ar2", "ma", "walk", "ou", "garch", "trend", "season", "gjr", "ar_student"]
+
+
+@pytest.mark.parametrize("name", BY_ROWS)
 def test_these_begin_and_run_as_rows(name):
     at = next(iter(places(BODIES[name])))
     assert run(build(spec_of(varied(BODIES[name], at))), 0, PATHS).together
@@ -99,9 +102,9 @@ def test_these_begin_and_run_as_rows(name):
 
 @pytest.mark.parametrize("name", ["noise", "ar1", "garch", "ar_student"])
 def test_these_run_as_rows_beside_one_that_begins_path_by_path(name):
-    """Here a garch with a threshold: then all paths have graphs of their own."""
+    """Here a stochastic volatility: then all paths have graphs of their own."""
     body = varied(BODIES[name], next(iter(places(BODIES[name]))))
-    series = {"x": [body], "y": [varied(BODIES["gjr"], ("gjr_garch", "alpha"))]}
+    series = {"x": [body], "y": [varied(BODIES["volatility"], ("stochastic_volatility", "phi"))]}
     raw = {"seed": 3, "paths": PATHS, "time": {"steps": STEPS}, "series": series}
     runner = run(build(read_raw(raw, catalogue(), LAWS)), 0, PATHS)
     stacks = [node.term for node, _ in runner._nodes if node.name.startswith("x.")]
@@ -112,7 +115,7 @@ def test_the_search_for_cycles_goes_on_after_the_graphs_are_made():
     import gc
 
     assert gc.isenabled()
-    runner = run(build(spec_of(varied(BODIES["gjr"], next(iter(places(BODIES["gjr"])))))), 0, PATHS)
+    runner = run(build(spec_of(varied(BODIES["volatility"], next(iter(places(BODIES["volatility"])))))), 0, PATHS)
     assert gc.isenabled()
     runner.tile(3)
     assert gc.isenabled()
