@@ -13,6 +13,19 @@ from procgen.spec.words import did_you_mean
 from procgen.terms import catalogue
 
 STANDARD = "a law has mean 0 and variance 1 before it is scaled by sd"
+SHOWN = {  # numbers of an example of each law that has some
+    "student_t": "{df: 6}",
+    "skewed_t": "{df: 8, skew: -0.3}",
+    "ged": "{shape: 1.5}",
+    "skew_normal": "{alpha: 4}",
+    "gamma": "{shape: 2}",
+    "lognormal": "{sigma: 0.5}",
+    "mixture": "{weight: 0.1, ratio: 3}",
+    "normal_mixture": "{components: [{weight: 3}, {weight: 1, mean: 2, sd: 0.5}]}",
+    "bernoulli": "{p: 0.2}",
+    "empirical": "{values: [2, 3, 3, 5, 9]}",
+    "stable": "{alpha: 1.7, beta: 0}",
+}
 FAMILY = 20  # letters of the longest family, and a gap
 SHOCK = "any noise-like term in place of sd, total_sd and law"
 
@@ -151,7 +164,27 @@ def _law_page(name: str, width: int) -> str:
     if law.parameters:
         lines += ["", "parameters", *_parameters(law.parameters, width)]
     unit = "it has no variance: white_noise scales it by `spread`" if law.scaled_by == "spread" else STANDARD
-    return "\n".join([*lines, "", unit])
+    lines += ["", unit, "", "a spec that runs", *(f"  {line}" for line in law_spec(name).splitlines())]
+    return "\n".join([*lines, "", _hanging("its moments", _moments(name), 13, width)])
+
+
+def law_spec(name: str) -> str:
+    """A whole spec with white noise of a law."""
+    law = f"{{{name}: {SHOWN[name]}}}" if name in SHOWN else name
+    head = "procgen: 1\nseed: 1\npaths: 100\ntime: {start: 2027-01-04, every: 1h, steps: 50}\n"
+    return f"{head}series:\n  x: [{{white_noise: {{{LAWS[name].scaled_by}: 1, law: {law}}}}}]\n"
+
+
+def _moments(name: str) -> str:
+    """Skewness and excess kurtosis of a law with the numbers of its example, and which moments it has."""
+    from procgen.spec.reader import read_text
+
+    law = read_text(law_spec(name), catalogue(), LAWS).series["x"].of[0].values["law"]
+    told = [("skewness", law.skewness), ("excess kurtosis", law.excess_kurtosis)] if not law.needs_spread else []
+    said = [f"{what} {value + 0.0:.6g}" if value is not None else f"no {what}" for what, value in told]
+    highest = float(law.highest_moment)
+    said.append("all exist" if highest == float("inf") else f"those below order {highest:.6g} exist")
+    return ", ".join(said)
 
 
 def purpose(law: type[Law]) -> str:
