@@ -86,7 +86,7 @@ def plan_relations(
         if len(found) == MOST:
             break
         combined = _combined(theory, weights)
-        if gap and not _is_gap(theory, weights, combined) or combined is None:
+        if combined is None or (gap and not _is_gap(theory, weights, combined)):
             continue
         grain = float(np.sqrt(sum((w * grains[name]) ** 2 for name, w in weights.items())))
         plan = plan_series(" ~ ".join(weights), combined, steps, grain, (), blind=True)
@@ -106,10 +106,10 @@ def _combined(theory: Any, weights: Mapping[str, float]) -> SeriesTheory | None:
     return SeriesTheory(" ~ ".join(weights), total) if total.sources else None
 
 
-def _is_gap(theory: Any, weights: Mapping[str, float], combined: SeriesTheory | None) -> bool:
+def _is_gap(theory: Any, weights: Mapping[str, float], combined: SeriesTheory) -> bool:
     """Whether series wander and their combination does not."""
     members = [theory[name].stationarity.verdict == GROWS for name in weights]
-    return combined is not None and all(members) and combined.stationarity.verdict != GROWS
+    return all(members) and combined.stationarity.verdict != GROWS
 
 
 def _together(theory: Any, a: str, b: str, steps: int) -> dict[str, float] | None:

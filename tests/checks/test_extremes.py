@@ -113,7 +113,8 @@ def test_a_value_that_marks_what_is_missing_is_told_as_one():
     values = draw(spec_of(AR, 400, 200, 3))
     values["x"][np.random.default_rng(1).random((400, 200)) < 0.01] = -999.0
     line = verdict(AR, values).headline[0]
-    assert line.startswith(f"x: {np.count_nonzero(values['x'] == -999.0)} values far outside what the law allows: such as path ")
+    count = np.count_nonzero(values["x"] == -999.0)
+    assert line.startswith(f"x: {count} values far outside what the law allows: such as path ")
     assert "value −999 (expected about 10 ± 1.25); all of them are this value, as if it marked what is missing" in line
 
 

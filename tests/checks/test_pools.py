@@ -67,8 +67,8 @@ def test_averages_are_those_of_numpy_however_the_steps_are_cut(name):
         a, b = z[: len(z) // 2].mean(axis=0), z[len(z) // 2 :].mean(axis=0)
         expected += [((a + b) / 2) ** 2 - level.variance, a * (b - level.slope * a) / level.half]
     if pool.shares:
-        window = x[pool.first :]
-        expected += [(window < q).mean(axis=0) - p for q, p in zip(pool.shares.points, pool.shares.chances, strict=True)]
+        window, shares = x[pool.first :], zip(pool.shares.points, pool.shares.chances, strict=True)
+        expected += [(window < q).mean(axis=0) - p for q, p in shares]
     np.testing.assert_allclose(found.T, expected, rtol=1e-8, atol=1e-11)
     assert bool(pool.changes) is (name != "stationary") and bool(pool.level) is (name == "stationary")
 
