@@ -15,6 +15,8 @@ from procgen.theory.sources import Source
 from procgen.theory.unknown import Unknown
 from procgen.theory.weights import over_distinct, weights_at
 
+MOST_VALUES = 20_000  # of a sample, times shocks: what is added up for one pair of steps
+
 
 def of_shocks(
     source: Source, tilts: tuple[Linear, Linear], t: np.ndarray, s: np.ndarray
@@ -47,19 +49,20 @@ def order(source: Source, form: Linear) -> float:
 
 def _sum(source: Source, weights: np.ndarray, of_what: str) -> float:
     """Sum of K over the weights."""
-    total, grown = 0.0, source.law.growth
-    for weight in weights[weights != 0.0].tolist():
-        rate = source.unit * weight
-        value = grown(rate)
-        if value is None:
-            raise Unknown(f"the mean of an exponential of {source.key} is finite, but not worked out for its law")
-        if math.isinf(value):
-            end = source.law.exponential_moments[0 if rate < 0.0 else 1]
-            tail = f"is finite below {end:.6g} only" if end else "is infinite for any q above 0"
-            side = "−" if rate < 0.0 else ""
-            raise Unknown(
-                f"infinite {of_what}: E exp({side}q z) of the {source.law} shocks z of {source.key} {tail}, "
-                f"and here q is {abs(rate):.6g}"
-            )
-        total += value
-    return total
+    rates = source.unit * weights[weights != 0.0]
+    values = len(getattr(source.law, "values", ()))  # of a sample, each of which counts for every shock
+    if len(rates) * values > MOST_VALUES:
+        raise Unknown(f"an exponential of {len(rates)} shocks of a sample of {values:,} values is not added up")
+    grown = source.law.growth(rates)
+    if grown is None:
+        raise Unknown(f"the mean of an exponential of {source.key} is finite, but not worked out for its law")
+    endless = np.flatnonzero(np.isinf(grown))
+    if len(endless):
+        rate = float(rates[endless[0]])
+        end = source.law.exponential_moments[0 if rate < 0.0 else 1]
+        tail = f"is finite below {end:.6g} only" if end else "is infinite for any q above 0"
+        raise Unknown(
+            f"infinite {of_what}: E exp({'−' if rate < 0.0 else ''}q z) of the {source.law} shocks z of {source.key} "
+            f"{tail}, and here q is {abs(rate):.6g}"
+        )
+    return float(grown.sum())

@@ -132,15 +132,16 @@ class Law:
         """The rates q below which E exp(q abs(z)) over the lower and over the upper side is finite."""
         return (math.inf, math.inf) if math.isinf(self.highest_moment) else (0.0, 0.0)
 
-    def growth(self, rate: float) -> float | None:
-        """log E exp(rate z): inf where that is infinite, None where it is finite and has no elementary form."""
+    def growth(self, rates: np.ndarray) -> np.ndarray | None:
+        """log E exp(rate z), elementwise: inf where that is infinite; None where it has no elementary form."""
         lower, upper = self.exponential_moments
-        if rate == 0.0:
-            return 0.0
-        end = upper if rate > 0.0 else lower
-        return self._growth(rate) if abs(rate) < end else math.inf
+        exists = np.abs(rates) < np.where(rates > 0.0, upper, lower)
+        found = self._growth(np.where(exists & (rates != 0.0), rates, 1e-300))
+        if found is None and exists.any():
+            return None
+        return np.where(rates == 0.0, 0.0, np.where(exists, 0.0 if found is None else found, math.inf))
 
-    def _growth(self, rate: float) -> float | None:
+    def _growth(self, rates: np.ndarray) -> np.ndarray | None:
         """The same where it is finite."""
         return None
 

@@ -62,7 +62,7 @@ class NormalMixture(Law):
     def moment(self, k: int) -> float:
         return Normals(self.standardised).moment(k)
 
-    def _growth(self, rate: float) -> float:
+    def _growth(self, rate: np.ndarray) -> np.ndarray:
         return Normals(self.standardised).growth(rate)
 
     def distribution(self) -> Any:

@@ -142,7 +142,7 @@ class Empirical(Law):
             for j in range(0, k + 1, 2)
         )
 
-    def _growth(self, rate: float) -> float:
+    def _growth(self, rate: np.ndarray) -> np.ndarray:
         if not self.bandwidth:
             return _points(self).growth(rate)
         means, sd = self.normals

@@ -58,9 +58,9 @@ class GED(Law):
             return 1 / self.scale, 1 / self.scale
         return (math.inf, math.inf) if self.shape > 1.0 else (0.0, 0.0)
 
-    def _growth(self, rate: float) -> float | None:
+    def _growth(self, rate: np.ndarray) -> np.ndarray | None:
         if self.shape == 1.0:
-            return -math.log1p(-((rate * self.scale) ** 2))
+            return -np.log1p(-((rate * self.scale) ** 2))
         return rate * rate / 2 if self.shape == 2.0 else None
 
     def distribution(self) -> Any:

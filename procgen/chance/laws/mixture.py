@@ -57,7 +57,7 @@ class Mixture(Law):
     def moment(self, k: int) -> float:
         return Normals(self.components).moment(k)
 
-    def _growth(self, rate: float) -> float:
+    def _growth(self, rate: np.ndarray) -> np.ndarray:
         return Normals(self.components).growth(rate)
 
     def distribution(self) -> Any:
@@ -112,12 +112,12 @@ class Normals:
             for j in range(0, k + 1, 2)
         )
 
-    def growth(self, rate: float) -> float:
+    def growth(self, rate: np.ndarray) -> np.ndarray:
         """log E exp(rate z)."""
         from scipy.special import logsumexp
 
         exponents = [mean * rate + (sd * rate) ** 2 / 2 for _, mean, sd in self.parts]
-        return float(logsumexp(exponents, b=[w for w, _, _ in self.parts]))
+        return logsumexp(np.stack(exponents, axis=1), b=[w for w, _, _ in self.parts], axis=1)
 
     def distribution(self) -> Any:
         """Their mixture as a frozen SciPy distribution."""

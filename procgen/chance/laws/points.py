@@ -55,11 +55,11 @@ class Points:
         """E z^k."""
         return float(np.dot(self.chances, self.values**k))
 
-    def growth(self, rate: float) -> float:
+    def growth(self, rate: np.ndarray) -> np.ndarray:
         """log E exp(rate z)."""
         from scipy.special import logsumexp
 
-        return float(logsumexp(rate * self.values, b=self.chances))
+        return logsumexp(rate[:, None] * self.values, b=self.chances, axis=1)
 
     def expect(self, f: Callable[[float], float]) -> float:
         """E f(z)."""
@@ -165,7 +165,7 @@ class Bernoulli(Law):
         low, high = self.ends
         return (1 - self.p) * low**k + self.p * high**k
 
-    def _growth(self, rate: float) -> float:
+    def _growth(self, rate: np.ndarray) -> np.ndarray:
         return self.points.growth(rate)
 
     def distribution(self) -> Any:

@@ -46,9 +46,9 @@ class Gamma(Law):
     def exponential_moments(self) -> tuple[float, float]:
         return math.inf, math.sqrt(self.shape)
 
-    def _growth(self, rate: float) -> float:
+    def _growth(self, rate: np.ndarray) -> np.ndarray:
         root = math.sqrt(self.shape)
-        return -root * rate - self.shape * math.log1p(-rate / root)
+        return -root * rate - self.shape * np.log1p(-rate / root)
 
     def distribution(self) -> Any:
         from scipy.stats import gamma

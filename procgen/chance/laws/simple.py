@@ -39,7 +39,7 @@ class Normal(Law):
     def moment(self, k: int) -> float:
         return 0.0 if k % 2 else float(math.prod(range(1, k, 2)))
 
-    def _growth(self, rate: float) -> float:
+    def _growth(self, rate: np.ndarray) -> np.ndarray:
         return rate * rate / 2
 
     def distribution(self) -> Any:
@@ -67,8 +67,8 @@ class Laplace(Law):
     def exponential_moments(self) -> tuple[float, float]:
         return 1 / _ROOT_HALF, 1 / _ROOT_HALF
 
-    def _growth(self, rate: float) -> float:
-        return -math.log1p(-rate * rate / 2)
+    def _growth(self, rate: np.ndarray) -> np.ndarray:
+        return -np.log1p(-rate * rate / 2)
 
     def distribution(self) -> Any:
         from scipy.stats import laplace
@@ -99,9 +99,8 @@ class Logistic(Law):
     def exponential_moments(self) -> tuple[float, float]:
         return 1 / _ROOT_3_PER_PI, 1 / _ROOT_3_PER_PI
 
-    def _growth(self, rate: float) -> float:
-        x = math.pi * _ROOT_3_PER_PI * abs(rate)
-        return math.log(x / math.sin(x))
+    def _growth(self, rate: np.ndarray) -> np.ndarray:
+        return -np.log(np.sinc(_ROOT_3_PER_PI * rate))
 
     def distribution(self) -> Any:
         from scipy.stats import logistic
@@ -124,11 +123,10 @@ class Uniform(Law):
     def moment(self, k: int) -> float:
         return 0.0 if k % 2 else 3.0 ** (k // 2) / (k + 1)
 
-    def _growth(self, rate: float) -> float:
-        x = _ROOT_3 * abs(rate)
-        if x < 0.01:
-            return x * x / 6 - x**4 / 180
-        return x + math.log(-math.expm1(-2 * x) / (2 * x))
+    def _growth(self, rate: np.ndarray) -> np.ndarray:
+        x = _ROOT_3 * np.abs(rate)
+        far = np.maximum(x, 0.01)
+        return np.where(x < 0.01, x * x / 6 - x**4 / 180, far + np.log(-np.expm1(-2 * far) / (2 * far)))
 
     def distribution(self) -> Any:
         from scipy.stats import uniform

@@ -62,12 +62,12 @@ class SkewNormal(Law):
         normal = [0.0 if j % 2 else math.prod(range(1, j, 2)) * (1 - d * d) ** (j // 2) for j in range(k + 1)]
         return sum(math.comb(k, j) * centred(j) * normal[k - j] for j in range(k + 1)) / sd**k
 
-    def _growth(self, rate: float) -> float:
+    def _growth(self, rate: np.ndarray) -> np.ndarray:
         from scipy.special import log_ndtr
 
         mean, sd = self.mean_and_sd
         q = rate / sd
-        return math.log(2) + q * q / 2 + float(log_ndtr(self._delta * q)) - mean * q
+        return math.log(2) + q * q / 2 + log_ndtr(self._delta * q) - mean * q
 
     def distribution(self) -> Any:
         return _distribution(self)
@@ -102,7 +102,7 @@ def _distribution(law: SkewNormal) -> Any:
     def below(x, a):
         """F = Φ − 2 T (Owen 1956); where that cancels, F = 1/π times the integral over t > a of
 
-            exp(−x² (1 + t²) / 2) / (1 + t²),   with t² = a² + 2 v / x²   by Laguerre's rule in v.
+        exp(−x² (1 + t²) / 2) / (1 + t²),   with t² = a² + 2 v / x²   by Laguerre's rule in v.
         """
         near = np.asarray(ndtr(x) - 2 * owens_t(x, a))
         far = (x < 0) & (a * np.abs(x) > _CANCELS)
