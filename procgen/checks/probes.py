@@ -177,7 +177,7 @@ def plan_series(
         blank if mean is None else mean,
         blank if variance is None else variance,
         grain,
-        "; ".join(unknown),
+        "; ".join(dict.fromkeys(unknown)),
         probe_pairs(at.tolist()),
     )
     plan.highest = float(theory.highest_moment or 0.0)

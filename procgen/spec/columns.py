@@ -248,6 +248,18 @@ def has_column(table: Columns, name: str, tree: Tree, reader: Reading) -> bool:
     return False
 
 
+def table_of(tree: Tree, fields: Sequence[Parameter], reader: Reading) -> tuple[Columns, str] | None:
+    """The table of a mapping of a file and one of its columns, and that column; None after reporting what is wrong."""
+    before = len(reader.faults)
+    asked = read_each(tree, fields, reader)
+    if len(reader.faults) > before:
+        return None
+    table = read_file(tree.value["file"], reader)
+    if table is INVALID or not has_column(table, asked["column"], tree, reader):
+        return None
+    return table, asked["column"]
+
+
 def _put(tree: Tree, found: dict[int, float], reader: Reading) -> bool:
     """Write the numbers from the first step that leads up to step 0 without a gap, as far as there is none."""
     if 0 not in found:

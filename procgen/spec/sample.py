@@ -8,10 +8,10 @@ from __future__ import annotations
 
 from typing import Any
 
-from procgen.spec.columns import has_column
+from procgen.spec.columns import table_of
 from procgen.spec.declare import INVALID, Domain, Parameter, Real, Reals, Schema, Text, mapping_of, read_each
 from procgen.spec.domains import Reading
-from procgen.spec.tables import has_numbers, read_file
+from procgen.spec.tables import has_numbers
 from procgen.spec.tree import Tree
 
 FILE = (
@@ -38,17 +38,12 @@ class Sample(Domain):
 
     def _inlined(self, tree: Tree, reader: Reading) -> bool:
         """Put the numbers of the file in the place of its name; False after reporting why they cannot be."""
-        before = len(reader.faults)
-        asked = read_each(tree, FILE, reader)
-        if len(reader.faults) > before:
+        found = table_of(tree, FILE, reader)
+        if found is None or not has_numbers(*found, None, tree.value["file"], reader):
             return False
-        table = read_file(tree.value["file"], reader)
-        if table is INVALID or not has_column(table, asked["column"], tree, reader):
-            return False
-        if not has_numbers(table, asked["column"], None, tree.value["file"], reader):
-            return False
+        table, column = found
         place = tree.value["column"].place
-        trees = tuple([Tree(value, place) for value in table[asked["column"]]])
+        trees = tuple([Tree(value, place) for value in table[column]])
         tree.value.clear()
         tree.value.update(numbers=Tree(trees, place))
         return True

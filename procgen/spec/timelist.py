@@ -10,9 +10,9 @@ from datetime import UTC, datetime
 from typing import Any
 
 from procgen.spec.calendar import LAST_YEAR, Grid
-from procgen.spec.columns import has_column
-from procgen.spec.declare import INVALID, Domain, Parameter, Reading, Schema, Text, mapping_of, read_each
-from procgen.spec.tables import Columns, read_file
+from procgen.spec.columns import table_of
+from procgen.spec.declare import INVALID, Domain, Parameter, Reading, Schema, Text, mapping_of
+from procgen.spec.tables import Columns
 from procgen.spec.tree import Tree
 from procgen.spec.units import MICROSECOND, parse_date
 
@@ -90,16 +90,11 @@ def _earlier(moment: datetime, clock: Grid, times: tuple[Tree, ...], found: list
 
 def _inlined(tree: Tree, reader: Reading) -> bool:
     """Put the times of a file in the place of its name; False after reporting why they cannot be."""
-    before = len(reader.faults)
-    asked = read_each(tree, FILE, reader)
-    if len(reader.faults) > before:
-        return False
-    table = read_file(tree.value["file"], reader)
-    if table is INVALID or not has_column(table, asked["column"], tree, reader):
-        return False
-    place, texts = tree.value["file"].place, _texts(table, asked["column"], tree, reader)
+    found = table_of(tree, FILE, reader)
+    texts = None if found is None else _texts(*found, tree, reader)
     if texts is None:
         return False
+    place = tree.value["file"].place
     tree.value, tree.keys = tuple([Tree(text, place) for text in texts]), {}
     return True
 

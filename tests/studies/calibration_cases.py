@@ -169,21 +169,11 @@ def variance(dof: int) -> Findings:
     )
 
 
-def ratio(m: int, n: int) -> Findings:
+def ratio(m: int, n: int, judged: Any = judge.ratio) -> Findings:
     """Two variances of normals, m and n squares each, by NumPy's chi-squares."""
     return of_one_number(
         lambda rng, count: (rng.chisquare(m, count) / m) / (rng.chisquare(n, count) / n),
-        lambda f: judge.ratio(max(f, 0.0) * m, m, float(n), n),
-        1.0,
-        math.sqrt(2 / m + 2 / n),
-    )
-
-
-def evenness(m: int, n: int) -> Findings:
-    """The lower tail of the ratio of two variances, by NumPy's chi-squares."""
-    return of_one_number(
-        lambda rng, count: (rng.chisquare(m, count) / m) / (rng.chisquare(n, count) / n),
-        lambda f: judge.evenness(max(f, 0.0) * m, m, float(n), n),
+        lambda f: judged(max(f, 0.0) * m, m, float(n), n),
         1.0,
         math.sqrt(2 / m + 2 / n),
     )
@@ -544,8 +534,8 @@ CASES = (
     Case("shocks: correlation between series, 30 of ρ 0.5", 10_000_000, between_series(0.5, 30)),
     Case("shocks: variance of sums, 12 stretches of 16 steps", 10_000_000, ratio(12, 180)),
     Case("shocks: variance of sums, 2 stretches of 256 steps", 10_000_000, ratio(2, 510)),
-    Case("shocks: balance of 30 paths, 20 steps", 10_000_000, evenness(20, 580)),
-    Case("shocks: balance of 2,000 paths, 200 steps", 10_000_000, evenness(200, 399_800)),
+    Case("shocks: balance of 30 paths, 20 steps", 10_000_000, ratio(20, 580, judge.evenness)),
+    Case("shocks: balance of 2,000 paths, 200 steps", 10_000_000, ratio(200, 399_800, judge.evenness)),
     Case("shocks: level by path, 30 paths of 200 steps", 200_000, by_path("shocks: level by path", 30, 200), 300),
     Case("shocks: spread by path, 30 paths of 200 steps", 200_000, by_path("shocks: spread by path", 30, 200), 300),
     Case("shocks: spread by path, 200 paths of 20 steps", 50_000, by_path("shocks: spread by path", 200, 20), 2000),
