@@ -7,6 +7,7 @@ from typing import Annotated
 import typer
 
 from procgen.console import guarded, printed, progress
+from procgen.options import whole
 
 EXAMPLES = (
     "\b\nExamples:\n  procgen export build/pump-flow -o flow.csv --paths 0-9\n"
@@ -32,7 +33,7 @@ def numbers_of(text: str) -> range:
     first, _, last = (part.strip() for part in text.partition("-"))
     last = last if "-" in text else first
     if not (first.isdecimal() and last.isdecimal() and max(len(first), len(last)) <= 15 and int(first) <= int(last)):
-        raise typer.BadParameter(f"expected numbers from 0 on, such as 0-99 or 7, got {text!r}")
+        raise typer.BadParameter(f"expected numbers from 0 on, the smaller first, such as 0-99 or 7, got {text!r}")
     return range(int(first), int(last) + 1)
 
 
@@ -74,7 +75,7 @@ def export(
         typer.Option(parser=numbers_of, metavar="0-95", help="Steps by number, both included; all when absent."),
     ] = None,
     decimals: Annotated[
-        int | None, typer.Option(metavar="N", help="Round to so many; as stored when absent.", min=-22, max=22)
+        int | None, typer.Option(parser=whole(-22, 22), metavar="N", help="Round to so many; as stored when absent.")
     ] = None,
     local_time: Annotated[
         bool, typer.Option("--local-time", help="Times by the clock of the spec's zone, in place of UTC.")

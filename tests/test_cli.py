@@ -70,12 +70,16 @@ def test_help_names_every_command_and_shows_an_example_of_each():
         (("render", "--paths", "1e3"), "'--paths': expected a whole number of at least 1, in digits, got '1e3'"),
         (("render", "--workers", "0"), "'--workers': expected a whole number of at least 1, in digits, got '0'"),
         (("theory", "--lags", "100001"), "expected a whole number from 0 to 100,000, in digits, got '100001'"),
+        (("export", "--decimals", "1.5"), "'--decimals': expected a whole number from -22 to 22, in digits, got '1.5'"),
+        (("export", "--decimals", "23"), "'--decimals': expected a whole number from -22 to 22, in digits, got '23'"),
+        (("export", "--paths", "5-2"), "expected numbers from 0 on, the smaller first, such as 0-99 or 7, got '5-2'"),
+        (("difference", "--at", "1.5"), "'--at': expected steps from 0 on, such as 0,1,10, got '1.5'"),
         (("validate", "--false-alarm", "1"), "'--false-alarm': expected a number from 1e-12 to 0.5, got '1'"),
     ],
 )
 def test_a_number_out_of_bounds_is_told_as_it_was_given(arguments, said):
     name, *rest = arguments
-    result = CliRunner().invoke(app, [name, "x.yaml", *(("-o", "y") if name == "render" else ()), *rest])
+    result = CliRunner().invoke(app, [name, "x.yaml", *(("-o", "y") if name in ("render", "export") else ()), *rest])
     assert result.exit_code == 2 and said in " ".join(result.output.split())
 
 

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import ast
 import inspect
+import re
 from pathlib import Path
 
 import numpy as np
@@ -112,3 +114,33 @@ def test_a_type_checker_knows_what_the_calls_give():
         calls += [call for name, call in inspect.getmembers(kind, inspect.isfunction) if not name.startswith("_")]
     for call in [*calls, type(pg.theory).__call__]:
         assert inspect.signature(call).return_annotation is not inspect.Signature.empty, call
+
+
+def messages(file):
+    """The texts of a source file, each in one piece; `{}` stands for what is put in. No docstrings."""
+    tree = ast.parse(file.read_text(encoding="utf-8"))
+    inner = {id(node.value) for node in ast.walk(tree) if isinstance(node, ast.Expr)}
+    for node in ast.walk(tree):  # outer ones come first
+        if id(node) in inner:
+            continue
+        if isinstance(node, ast.JoinedStr):
+            inner |= {id(part) for part in ast.walk(node)}
+            yield "".join(part.value if isinstance(part, ast.Constant) else "{}" for part in node.values)
+        elif isinstance(node, ast.Constant) and isinstance(node.value, str):
+            yield node.value
+
+
+def test_a_message_that_names_an_option_names_the_argument_too():
+    """Sentences of `ensemble` and `checks` reach both those who type commands and those who call from Python."""
+    alone, seen = [], 0
+    for room in ("ensemble", "checks"):
+        for file in sorted((ROOT / "procgen" / room).glob("*.py")):
+            for text in messages(file):
+                for option in re.findall(r"--([a-z{}][a-z{}-]*)", text):
+                    seen += 1
+                    argument = "columns" if option.endswith("-col") else option.replace("-", "_")
+                    command = "procgen " in text.partition(f"--{option}")[0]  # shown whole
+                    pair = text.startswith("--")  # `checks.roles` puts both together
+                    if f"{argument}=" not in text and not command and not pair:
+                        alone.append(f"{file.name}: --{option} in {text!r}")
+    assert seen > 30 and not alone, "\n".join(alone)

@@ -87,7 +87,7 @@ def _table(ensemble: Any, drawn: Any) -> Check:
     try:
         found = pd.read_parquet(ensemble.path / PATHS).set_index("path")
     except (OSError, KeyError, ValueError) as error:
-        fault = f"{PATHS} cannot be read: {str(error).splitlines()[0]}; render again with --resume"
+        fault = f"{PATHS} cannot be read: {str(error).splitlines()[0]}; render again with --resume (resume=True)"
     else:
         wrong = [name for name in drawn if name not in found or not np.array_equal(found[name], drawn[name])]
         fault = f"{PATHS} is not what the spec draws ({', '.join(wrong)}); it was changed" if wrong else ""

@@ -13,7 +13,7 @@ from procgen.ensemble import digest, files, parquet
 from procgen.ensemble.columns import store
 from procgen.ensemble.draw import Drawer, empty
 from procgen.ensemble.ensemble import Blocks, Ensemble, OnDisk
-from procgen.ensemble.errors import EnsembleError
+from procgen.ensemble.errors import MEND, EnsembleError
 from procgen.ensemble.expected import departure
 from procgen.ensemble.expected import expected as read_expected
 from procgen.ensemble.manifest import Manifest, PartRecord, node
@@ -86,9 +86,9 @@ class DigestResult:
         """The result in a few lines."""
         lines = [str(damage) for damage in self.damages]
         if any("other values" in damage.sentence for damage in self.damages) and not self.redrawn:
-            lines.append("to see where: --redraw names the first value that differs")
+            lines.append("to see where: --redraw (redraw=True) names the first value that differs")
         if self.damages:
-            lines.append("to mend: render again with --resume, which draws missing and damaged parts anew")
+            lines.append(MEND)
         if self.digest is not None:
             verdict = "as recorded" if self.digest == self.recorded else f"recorded was {self.recorded}"
             lines.append(f"{self.digest}  {verdict}")
@@ -225,7 +225,7 @@ class Reader:
         file = files.missing(Folder(self.path), part.file, self.manifest.layout, self.columns)
         if file is not None:
             what = "the part" if file == part.file else file
-            raise EnsembleError(f"{what} is missing; draw it again with --resume")
+            raise EnsembleError(f"{what} is missing; draw it again with --resume (resume=True)")
         layout = self.manifest.layout
         yield from parquet.read(self.path, part.file, part.block, layout, self.columns, self.stamps, first, end)
 

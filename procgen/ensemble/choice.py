@@ -18,6 +18,7 @@ from procgen.ensemble.files import scratch
 from procgen.ensemble.forms import Form, form
 from procgen.ensemble.layouts import Layout
 from procgen.ensemble.plan import BUFFER_BYTES, Block, cut
+from procgen.spec.words import did_you_mean
 
 if TYPE_CHECKING:
     import pyarrow as pa
@@ -53,7 +54,8 @@ class Choice:
         known = {column.name: column for column in ensemble.columns}
         for name in names or ():
             if name not in known:
-                raise EnsembleError(f"expected a series among {', '.join(known)}, got {name!r}")
+                hint = did_you_mean(name, known)
+                raise EnsembleError(f"expected a series among {', '.join(known)}, got {name!r}{hint and f'; {hint}'}")
             if names is not None and list(names).count(name) > 1:
                 raise EnsembleError(f"expected each series once, got {name} {list(names).count(name)} times")
         if names is not None and not names:
@@ -78,11 +80,14 @@ class Choice:
         layout.check(self.columns, stamps is not None, range(self.block.first_path, self.block.end_path))
         if layout.kind == "wide" and len(self.columns) > 1:
             names = ", ".join(column.name for column in self.columns)
-            raise EnsembleError(f"a table of layout wide holds one series, got {names}; choose one (series, --series)")
+            raise EnsembleError(
+                f"a table of layout wide holds one series, got {names}; choose one with --series (series=)"
+            )
         if layout.kind == "wide" and self.block.paths > MOST_COLUMNS - 2:
             raise EnsembleError(
                 f"a table with a column a path holds at most {MOST_COLUMNS - 2:,} paths, got {self.block.paths:,}; "
-                "choose fewer (paths, --paths), or another layout: few readers take more columns, whatever the format"
+                "choose fewer with --paths (paths=), or another layout: few readers take more columns, whatever the "
+                "format"
             )
         return form(layout, self.columns, stamps, self.block)
 
@@ -165,8 +170,6 @@ def _inside(name: str, wanted: Any, first: int, end: int) -> tuple[int, int]:
     if not isinstance(wanted, range) or wanted.step != 1:
         raise TypeError(f"expected {name} to be a range such as range({first}, {min(first + 10, end)}), got {wanted!r}")
     if not first <= wanted.start < wanted.stop <= end:
-        raise EnsembleError(
-            f"expected {name} within {first} to {end - 1}, got "
-            + (f"{wanted.start} to {wanted.stop - 1}" if len(wanted) else "none")
-        )
+        numbers = f"{wanted.start} to {wanted.stop - 1}" if len(wanted) > 1 else f"{wanted.start}" if wanted else "none"
+        raise EnsembleError(f"expected {name} within {first} to {end - 1}, got {numbers}")
     return wanted.start, wanted.stop

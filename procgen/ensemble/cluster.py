@@ -23,7 +23,7 @@ from dataclasses import dataclass, field
 from typing import Any
 
 from procgen.chance.streams import STREAM_VERSION
-from procgen.ensemble.engines import Engine, Here, Work, function
+from procgen.ensemble.engines import FEWER, Engine, Here, Work, function
 from procgen.ensemble.errors import EnsembleError
 
 LOCAL = "local"
@@ -39,7 +39,7 @@ MUST_AGREE = ("procgen", "numpy", "pyarrow", "pandas", "scipy")
 
 @contextlib.contextmanager
 def opened(
-    scheduler: str | None, workers: int | None, inherit: int | None = None, advice: str = "use fewer --workers"
+    scheduler: str | None, workers: int | None, inherit: int | None = None, advice: str = FEWER
 ) -> Iterator[Engine]:
     """The engine that was asked for: a cluster, or this machine when there is no scheduler."""
     if scheduler is None:
@@ -60,7 +60,7 @@ def joined(scheduler: str, workers: int | None = None) -> Iterator[Cluster]:
     except ImportError:
         raise EnsembleError(
             "working on a cluster needs dask and distributed, which are not installed: install the extra `cluster`, "
-            "or leave --scheduler out to draw on this machine"
+            "or leave --scheduler (scheduler=) out to draw on this machine"
         ) from None
     with _quiet(), contextlib.ExitStack() as stack:
         address = scheduler
@@ -188,7 +188,7 @@ class Cluster:
                 if time.monotonic() > give_up:
                     raise EnsembleError(
                         f"the scheduler at {self.address} has not answered for {PATIENCE:.0f} s; start it again, "
-                        "then go on with --resume"
+                        "then go on with --resume (resume=True)"
                     ) from None
 
 
@@ -273,7 +273,7 @@ class _Run:
         if flight.tries >= TRIES:
             raise EnsembleError(
                 f"workers died {TRIES} times under the same task ({type(error).__name__}), often for lack of memory; "
-                "give them more, then go on with --resume"
+                "give them more, then go on with --resume (resume=True)"
             )
         if not flight.copies:
             self._begin(flight)
@@ -337,5 +337,6 @@ def perform(text: str) -> str:
         except EnsembleError as error:
             return json.dumps({"error": str(error)})
         except MemoryError:
-            return json.dumps({"error": "a worker ran out of memory; give it more, then go on with --resume"})
+            error = "a worker ran out of memory; give it more, then go on with --resume (resume=True)"
+            return json.dumps({"error": error})
     return json.dumps({"records": records, "rows": rows})

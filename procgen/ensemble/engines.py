@@ -27,6 +27,7 @@ from procgen.ensemble.errors import EnsembleError, system_sentence
 
 Progress = Callable[[int, int], None]  # (rows done so far, rows in all)
 Records = list[dict[str, Any]]
+FEWER = "use fewer workers (--workers, workers=)"
 WORTH = 4_000_000  # values that repay one more process that draws
 
 
@@ -152,7 +153,7 @@ class Here:
 
     size: int
     inherit: int | None = None
-    advice: str = "use fewer --workers"
+    advice: str = FEWER
 
     def check_sees(self, folder: str) -> None:
         """Nothing to check: it is one machine."""

@@ -292,7 +292,7 @@ def open_ensemble(path: str | Place) -> OnDisk:
     if data is None:
         unfinished = (folder.path / PLAN).exists()
         raise EnsembleError(
-            f"{path} is an unfinished ensemble; go on with: procgen render SPEC -o {path} --resume"
+            f"{path} is an unfinished ensemble; go on with: procgen render SPEC -o {path} --resume (resume=True)"
             if unfinished
             else f"{path} has no {MANIFEST}; expected a folder that procgen render has made"
         )

@@ -158,7 +158,9 @@ def _refuse_place(path: Path, overwrite: bool) -> None:
     if not path.parent.is_dir():
         raise EnsembleError(f"there is no folder {path.parent} to write {path.name} into; make it first")
     if path.exists() and not overwrite:
-        raise EnsembleError(f"{path} is there already; choose another name, or replace it with --overwrite")
+        raise EnsembleError(
+            f"{path} is there already; choose another name, or replace it with --overwrite (overwrite=True)"
+        )
 
 
 def _refuse_source(path: Path, ensemble: Ensemble) -> None:

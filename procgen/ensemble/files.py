@@ -143,4 +143,4 @@ def refuse_missing(folder: Folder, name: str, layout: Layout, columns: Sequence[
     """EnsembleError when a file of a part is not there."""
     file = missing(folder, name, layout, columns)
     if file is not None:
-        raise EnsembleError(f"{folder.path / file} is missing; draw it again with --resume")
+        raise EnsembleError(f"{folder.path / file} is missing; draw it again with --resume (resume=True)")

@@ -197,7 +197,7 @@ class Job:
         with self.folder.locked() as descriptor:
             # another render may have finished while this one waited for the lock
             if overwrite or (found := self._complete(resume, progress)) is None:
-                advice = "use fewer --workers, then go on with --resume"
+                advice = f"{engines.FEWER}, then go on with --resume (resume=True)"
                 with opened(scheduler, workers, descriptor, advice) as engine:
                     found = self._draw(engine, resume, overwrite, progress)
         return OnDisk(self.folder.path, found, self.spec)

@@ -13,6 +13,7 @@ from typing import Any
 from procgen.ensemble.columns import Column
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.plan import CELL
+from procgen.spec.words import did_you_mean
 
 KINDS = ("long", "panel", "nested", "wide")
 PARTITIONS = ("paths", "series")
@@ -47,7 +48,10 @@ class Layout:
     def asked(cls, kind: str, partition: str | None = None, columns: Mapping[str, str] | None = None) -> Layout:
         """The layout of these words; EnsembleError when they name none."""
         if kind not in KINDS:
-            raise EnsembleError(f"expected layout {', '.join(KINDS[:-1])} or {KINDS[-1]}, got {kind!r}")
+            hint = did_you_mean(kind, KINDS)
+            raise EnsembleError(
+                f"expected layout {', '.join(KINDS[:-1])} or {KINDS[-1]}, got {kind!r}{hint and f'; {hint}'}"
+            )
         usual = "series" if kind == "wide" else "paths"
         partition = usual if partition is None else partition
         if partition not in PARTITIONS:
@@ -138,7 +142,7 @@ class Layout:
             if count > 1:
                 raise EnsembleError(
                     f"{count} columns of layout {self.kind} would be called {name!r}; give one another name with "
-                    f"columns (--columns), whose roles are {', '.join(ROLES[self.kind])}"
+                    f"--columns (columns=), whose roles are {', '.join(ROLES[self.kind])}"
                 )
 
     def check_files(self, part: str, columns: Sequence[Column]) -> None:

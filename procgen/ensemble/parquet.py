@@ -195,7 +195,9 @@ def _opened(path: Place, rows: Form) -> Iterator[pq.ParquetFile]:
                 )
             yield file
     except (OSError, pa.ArrowException) as error:
-        raise EnsembleError(f"{path} is damaged: {_first_line(error)}; draw it again with --resume") from None
+        raise EnsembleError(
+            f"{path} is damaged: {_first_line(error)}; draw it again with --resume (resume=True)"
+        ) from None
 
 
 def _expect_schema(path: Place, found: pa.Schema, expected: pa.Schema) -> None:

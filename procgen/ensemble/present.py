@@ -52,7 +52,7 @@ class Present:
         suspects = [part for part, size in sizes.items() if resume or size != part.bytes]
         damages = Reader(self.folder.path, found, self.factory).examine(progress, suspects)[0] if suspects else []
         if damages and not resume:
-            mend = "" if "--resume" in damages[0].sentence else "; draw it again with --resume"
+            mend = "" if "resume=True" in damages[0].sentence else "; draw it again with --resume (resume=True)"
             raise EnsembleError(f"{self.folder.path / damages[0].file}: {damages[0].sentence}{mend}")
         self.damaged = {damage.file for damage in damages}
         return None if damages or found.changed else found
@@ -69,13 +69,15 @@ class Present:
         if not resume:
             raise EnsembleError(
                 f"{self.folder.path} holds an unfinished render of this spec; "
-                "go on with --resume, or begin again with --overwrite"
+                "go on with --resume (resume=True), or begin again with --overwrite (overwrite=True)"
             )
         try:
             blocks = [Block(*map(int, numbers)) for numbers in plan["parts"]]
             covers(blocks, self.whole)
         except (KeyError, TypeError, ValueError):
-            raise EnsembleError(f"{self.folder.path / PLAN} is damaged; begin again with --overwrite") from None
+            raise EnsembleError(
+                f"{self.folder.path / PLAN} is damaged; begin again with --overwrite (overwrite=True)"
+            ) from None
         return _chains(blocks)
 
     def write_plan(self, chains: Sequence[Chain], columns: Sequence[Column]) -> None:
@@ -159,7 +161,7 @@ class Present:
             found = ", ".join(f"{name} {there} there, {asked} asked" for name, there, asked in pairs)
             raise EnsembleError(
                 f"{self.folder.path} holds an ensemble of another kind ({found}); "
-                "choose another OUT, or remove that one with --overwrite"
+                "choose another OUT, or remove that one with --overwrite (overwrite=True)"
             )
 
 

@@ -92,7 +92,7 @@ def refuse_version(identity: Mapping[str, Any], where: object) -> None:
     if version != STREAM_VERSION:
         raise EnsembleError(
             f"{where} was drawn with stream version {version}, and this procgen draws version {STREAM_VERSION}; "
-            "use the procgen that made it, or draw it again with --overwrite"
+            "use the procgen that made it, or draw it again with --overwrite (overwrite=True)"
         )
 
 
@@ -101,5 +101,5 @@ def refuse_changed(manifest: Manifest, where: object) -> None:
     if manifest.changed:
         raise EnsembleError(
             f"{where} was changed after it was written ({', '.join(manifest.changed)}); "
-            "render again with --resume, which writes it anew"
+            "render again with --resume (resume=True), which writes it anew"
         )

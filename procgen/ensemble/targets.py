@@ -166,8 +166,8 @@ class Sheet(Target):
         if count + 1 > SHEET_ROWS or columns > SHEET_COLUMNS:
             raise EnsembleError(
                 f"{path.name} would need {count + 1:,} rows and {columns:,} columns, and a sheet holds {SHEET_ROWS:,} "
-                f"and {SHEET_COLUMNS:,}; choose fewer paths, steps or series (--paths, --steps, --series), "
-                "or write .csv or .parquet"
+                f"and {SHEET_COLUMNS:,}; choose fewer paths, steps or series (--paths, --steps, --series; "
+                "paths=, steps=, series=), or write .csv or .parquet"
             )
         try:
             import openpyxl  # noqa: F401
@@ -212,7 +212,8 @@ class Parquet(Target):
         if rows.layout.kind == "wide" and groups > 1 and groups * columns > CHUNKS:
             raise EnsembleError(
                 f"{path.name} would be {groups * columns:,} pieces of columns, and a Parquet file of more than "
-                f"{CHUNKS:,} is mostly a list of them; choose fewer paths or steps (--paths, --steps), or layout long"
+                f"{CHUNKS:,} is mostly a list of them; choose fewer paths or steps (--paths, --steps; paths=, "
+                "steps=), or layout long"
             )
 
     def __exit__(self, kind: type[BaseException] | None, *rest: object) -> None:

@@ -7,6 +7,7 @@ from textwrap import wrap
 from typing import TYPE_CHECKING
 
 from procgen.checks.words import number
+from procgen.ensemble.errors import MEND
 from procgen.report.text import CAUTION, table
 
 if TYPE_CHECKING:
@@ -26,8 +27,7 @@ def difference_text(difference: Difference) -> str:
         lines[-1] = "Both mean the same."
     lines += ["", _headline(difference), *_some([*_series(difference)])]
     if difference.damages:
-        mend = "to mend: render again with --resume, which draws missing and damaged parts anew"
-        lines += ["", *_some([*difference.damages]), mend]
+        lines += ["", *_some([*difference.damages]), MEND]
     if difference.paired:
         lines += ["", *_paired(difference), "", *wrap(CAUTION, 100)]
     alone = [one.name for one in difference.series if one.state == "differs" and not one.shares]
@@ -41,7 +41,7 @@ def _some(lines: list[str]) -> list[str]:
 
 
 def _more(count: int) -> list[str]:
-    return [f"  and {count:,} more; --json lists them all"]
+    return [f"  and {count:,} more; --json (.to_dict()) lists them all"]
 
 
 def _side(side: Side) -> str:
