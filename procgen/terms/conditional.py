@@ -12,6 +12,7 @@ from procgen.spec.declare import Flag, Parameter, Real, Reals, Record
 from procgen.terms.base import Draw, Term, rows, stated
 from procgen.terms.burnt import BURN_TILE, burnt
 from procgen.terms.rows import each_path, row_in
+from procgen.terms.start import decay_lengths
 
 FORGOTTEN = 1e-9
 OMEGA = Parameter("omega", "ω", Real(above=0), "the constant in the variance", default=None, unit="series²")
@@ -53,6 +54,10 @@ class Conditional(Term):
     def burn(self):
         raise NotImplementedError
 
+    def persistence(self):
+        """The number below 1 whose powers `burn` follows, or a row of them; None where it is not one number."""
+        return None
+
     def rest(self):
         raise NotImplementedError
 
@@ -70,12 +75,15 @@ class Conditional(Term):
         return None if self.before is None else min(len(self.before["shocks"]), len(self.before["variance"]))
 
     def reach(self, head):
-        return (max(0 if self.before is not None else max(self.burns), head),)
+        return (max(0 if self.before is not None else int(self.burns.max()), head),)
 
     @cached_property
     def burns(self):
         """`burn` of every path where numbers are rows, and of all paths otherwise."""
-        return [term.burn() for term in each_path(self)]
+        share = self.persistence()
+        if np.ndim(share) and np.all(share < 1.0):
+            return decay_lengths(share)
+        return np.array([term.burn() for term in each_path(self)])
 
     def begin(self, before):
         if self.before is not None:
@@ -83,7 +91,7 @@ class Conditional(Term):
             values = {"": past[len(past) - before.head :], "variance": h[len(h) - before.head :]}
             return values, self.left()
         if paths := row_in(self.values):
-            lengths = np.maximum(np.array(self.burns), before.head)
+            lengths = np.maximum(self.burns, before.head)
             rest = {name: state + np.zeros(paths) for name, state in self.rest().items()}
             return burnt(self, lengths, rest, before.head, before.inputs[0])
         return self._burnt_in(before, self.rest())

@@ -127,6 +127,10 @@ class Garch(Conditional):
         padded = [(*side, *([0.0] * (n - len(side)))) for side in (self.alpha, self.beta)]
         return [a + b for a, b in zip(*padded, strict=True)]
 
+    def persistence(self):
+        weights = self._weights()
+        return weights[0] if len(weights) == 1 else None
+
     def burn(self):
         """Steps until the variance has forgotten where it began, to 1e-12."""
         weights = self._weights()

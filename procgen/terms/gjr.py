@@ -101,9 +101,12 @@ class GjrGarch(Conditional):
         """Standard deviation, in the series' unit."""
         return plain(np.sqrt(self.resting()))
 
+    def persistence(self):
+        return self.alpha + self.beta + self.gamma * downside(self.law)
+
     def burn(self):
         """Steps until the variance has forgotten where it began, to 1e-12."""
-        persistence = self.alpha + self.beta + self.gamma * downside(self.law)
+        persistence = self.persistence()
         if persistence < 1.0:
             return decay_length(companion((persistence,), (), 1, 0)[0])
         return burn_without_variance(self.law, self._factor)

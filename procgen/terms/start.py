@@ -179,6 +179,21 @@ def _decay_of_one(a: float, negligible: float) -> int:
     return n + 1
 
 
+def decay_lengths(a: Array, negligible: float = NEGLIGIBLE) -> Array:
+    """`decay_length` of many single numbers at once, by the same products: each path may have its own."""
+    powers = [a]
+    while (np.abs(powers[-1]) > negligible).any():
+        if 2 ** len(powers) > LONGEST:
+            raise ValueError(f"the recursion still feels its start after {LONGEST:,} steps")
+        powers.append(powers[-1] * powers[-1])
+    n, reached = np.zeros(a.shape, np.int64), np.ones(a.shape)
+    for k in range(len(powers) - 2, -1, -1):
+        further = reached * powers[k]
+        more = np.abs(further) > negligible
+        n, reached = np.where(more, n + 2**k, n), np.where(more, further, reached)
+    return n + 1
+
+
 @dataclass(frozen=True)
 class Member:
     """One linear term in a joint start: its recursion, and its shock's standard deviation; or rows, one a path."""

@@ -14,7 +14,7 @@ from procgen.terms.by_path import run, varied_of
 from procgen.terms.graph import Graph, build
 from procgen.terms.rows import alike, each_path, row_in
 from procgen.terms.run import Run
-from procgen.terms.start import JointStart, Member, companion, stationary_cross, weigh
+from procgen.terms.start import JointStart, Member, companion, decay_length, decay_lengths, stationary_cross, weigh
 
 FIRST, PATHS, STEPS = 2, 8, 12
 
@@ -103,6 +103,15 @@ def test_rows_with_correlated_shocks(name):
     names = ["x.ar" if "lag" in first else f"x.{next(iter(first))}", f"y.{next(iter(second))}"]
     correlation = {"names": names, "matrix": [[1, -0.7], [-0.7, 1]]}
     assert_as_alone({"series": {"x": [first], "y": [second]}, "correlation": correlation})
+
+
+def test_lengths_of_burn_ins_are_those_of_each_path():
+    rates = np.concatenate([np.linspace(-0.99, 0.999, 501), [0.0, 1e-13, 1e-12, 2e-12, 1e-6, 0.9999]])
+    lengths = [decay_length(np.array([[rate]])) for rate in rates]
+    assert decay_lengths(rates).tolist() == lengths
+    assert max(lengths) > 250_000 and min(lengths) == 1
+    with pytest.raises(ValueError, match="524,288"):
+        decay_lengths(np.array([0.5, 0.99999]))
 
 
 def test_one_graph_is_made_for_all_paths(monkeypatch):
