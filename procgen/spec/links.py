@@ -38,9 +38,7 @@ class Links:
             raise LookupError(_unknown("series or shared body", owner, self.owners))
         if not rest:
             return Target(owner)
-        if rest[0] not in self.labels[owner]:
-            raise LookupError(_unknown(f"term of {owner}", rest[0], self.labels[owner]))
-        entry = self.labels[owner][rest[0]]
+        entry = self._term(owner, *rest)
         if len(rest) == 1:
             return Target(owner, entry)
         outputs = self.outputs(entry)
@@ -48,6 +46,28 @@ class Links:
         if output not in outputs:
             raise LookupError(_unknown(f"hidden output of {owner}.{rest[0]}", output, outputs))
         return Target(owner, entry, output)
+
+    def _term(self, owner: str, label: str, *output: str) -> Entry:
+        """Return the term of a body by its label; what has none is found by its kind, where it is the only one."""
+        labels = self.labels[owner]
+        if label in labels:
+            return labels[label]
+        body = list(walk(self.owners[owner].of))
+        plain = [entry for entry, is_shock in body if entry.kind == label and not named(entry) and not is_shock]
+        if len(plain) == 1:
+            return plain[0]
+        if plain:
+            raise LookupError(
+                f"{owner} has {len(plain)} terms of kind {label}: write as: some_name beside the one that is meant, "
+                f"and name {owner}.some_name"
+            )
+        driven = [entry for entry, _ in body if entry.shock is not None and entry.shock.kind == label]
+        if driven:
+            names = one_of([".".join((owner, entry.label, *output)) for entry in driven])
+            given = ".".join((owner, label, *output))
+            raise LookupError(f"a shock goes by the name of the term that it drives: expected {names}, got {given}")
+        kinds = [e.kind for e, is_shock in body if not named(e) and not is_shock and e.kind != "use"]
+        raise LookupError(_unknown(f"term of {owner}", label, dict.fromkeys([*labels, *kinds])))
 
     def outputs(self, entry: Entry) -> list[str]:
         """Return the hidden outputs that go by an entry's label: its own, and those of its unnamed shock."""
@@ -90,14 +110,19 @@ class Links:
     def _labels(self, owner: str, body: tuple[Entry, ...]) -> dict[str, Entry]:
         """Return the entries of a body by label, reporting a label that stands twice."""
         found: dict[str, Entry] = {}
+        by_kind: dict[str, Entry] = {}  # compositions without a label, which go by their kind
         for entry, is_shock in walk(body):
             kind = self.reader.catalogue.get(entry.kind)
-            if not named(entry) and (is_shock or (kind is not None and kind.composition)):
+            if not named(entry) and is_shock:
                 continue
-            if entry.label in found:
+            if not named(entry) and kind is not None and kind.composition:
+                by_kind.setdefault(entry.kind, entry)
+            elif entry.label in found:
                 self._fault(*_twice(owner, entry, found[entry.label]))
             else:
                 found[entry.label] = entry
+        for label in [label for label in by_kind if label in found]:
+            self._fault(*_twice(owner, found[label], by_kind[label]))
         return found
 
     def _fault(self, place: Place, message: str) -> None:

@@ -1,7 +1,9 @@
 """Labels, uses and circles."""
 
+import numpy as np
 import pytest
 
+import procgen as pg
 from tests.spec.small import HEAD, faults, read
 
 NEED = "needs a label of its own, by which its draws are found; write as: some_name beside"
@@ -90,6 +92,43 @@ def test_uses_of_what_is_not_there(name, message):
     shared = "shared: {w: [{garch: {sd: 1, alpha: 0.1}, as: swing}, {constant: 1}]}\n"
     assert faults(HEAD + shared + f"series:\n  x: {{use: {name}}}\n") == [
         f"{message}\n  at series.x.use (a.yaml, line 7, column 12)"
+    ]
+
+
+W = "shared: {w: [{exp: {garch: {sd: 1, alpha: 0.1}}}, {lag: {of: {constant: 1}, steps: 1}}]}\n"
+
+
+def test_a_composition_without_a_label_goes_by_its_kind():
+    """As in the graph: E exp of N(0, 1) is the square root of e; E max(N(0, 1), 0) is 1/√(2π)."""
+    read(HEAD + W + "series: {x: [{use: w.exp}, {use: w.lag}]}\n")
+    body = [{"exp": [{"white_noise": {"sd": 1}}]}, {"hinge": {"of": [{"use": "w.white_noise"}], "above": 0}}]
+    head = {"procgen": 1, "seed": 1, "paths": 1, "time": {"steps": 3}, "shared": {"w": body}}
+    theory = pg.theory(pg.load(head | {"series": {"x": {"use": "w.exp"}, "y": {"use": "w.hinge"}}}))
+    assert theory["x"].mean([0])[0] == pytest.approx(np.exp(0.5))
+    assert theory["y"].mean([0])[0] == pytest.approx(1 / np.sqrt(2 * np.pi))
+
+
+@pytest.mark.parametrize(
+    ("body", "name", "message"),
+    [
+        ("[{exp: {constant: 1}}, {exp: {trend: {level: 1}}}]", "w.exp",
+         "w has 2 terms of kind exp: write as: some_name beside the one that is meant, and name w.some_name"),
+        ("{ar: {phi: 0.1, shock: {garch: {sd: 1, alpha: 0.1}}}}", "w.garch.variance",
+         "a shock goes by the name of the term that it drives: expected w.ar.variance, got w.garch.variance"),
+        ("{exp: {constant: 1}}", "w.epx", "there is no term of w named epx; expected constant or exp; did you mean exp?"),
+        ("[{exp: {constant: 1}}, {use: z, as: u}]", "w.use", "there is no term of w named use; expected one of "
+         "constant, u, exp"),
+    ],
+)  # fmt: skip
+def test_what_goes_by_another_name_is_said(body, name, message):
+    text = HEAD + f"shared:\n  w: {body}\n  z: {{constant: 1}}\nseries:\n  x: {{use: {name}}}\n"
+    assert faults(text) == [f"{message}\n  at series.x.use (a.yaml, line 9, column 12)"]
+
+
+def test_a_label_is_no_kind_of_a_composition_beside_it():
+    text = series("x: [{exp: {ar: {phi: 0.1, sd: 1}}}, {constant: 5, as: exp}]")
+    assert faults(text) == [
+        "the label exp is taken in x in line 6; choose another\n  at series.x[1].as (a.yaml, line 6, column 57)"
     ]
 
 
