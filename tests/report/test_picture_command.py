@@ -3,8 +3,10 @@
 import builtins
 import json
 import os
+import struct
 import subprocess
 import sys
+import zlib
 from pathlib import Path
 
 import pytest
@@ -12,7 +14,7 @@ from typer.testing import CliRunner
 
 import procgen as pg
 from procgen.cli import app
-from procgen.report.pictures.write import PictureError
+from procgen.report.pictures.write import PictureError, is_ours, place_for
 from tests.report.pages import drawing, self_contained
 
 PUMP = str(Path(__file__).parent.parent.parent / "specs" / "pump-flow.yaml")
@@ -69,6 +71,40 @@ def test_what_procgen_wrote_is_replaced_and_nothing_else(name, tmp_path):
     said = Result("picture", PUMP, "-o", file).refused()
     assert f"{file} is there already, and is no picture or page of procgen" in said
     assert file.read_bytes() == before
+
+
+def png(*chunks: tuple[bytes, bytes]) -> bytes:
+    """A PNG of one grey pixel, with chunks behind its header: length, sort, data, CRC (W3C PNG, 5.3)."""
+
+    def chunk(sort: bytes, data: bytes) -> bytes:
+        return struct.pack(">I", len(data)) + sort + data + struct.pack(">I", zlib.crc32(sort + data))
+
+    header = struct.pack(">IIBBBBB", 1, 1, 8, 0, 0, 0, 0)
+    ends = [(b"IDAT", zlib.compress(b"\0\x80")), (b"IEND", b"")]
+    return b"\x89PNG\r\n\x1a\n" + b"".join(chunk(*one) for one in [(b"IHDR", header), *chunks, *ends])
+
+
+@pytest.mark.parametrize(
+    ("chunks", "ours"),
+    [
+        ([(b"tEXt", b"Software\0procgen")], True),
+        ([(b"tEXt", b"Title\0a fan"), (b"tEXt", b"Software\0procgen")], True),
+        ([], False),
+        ([(b"tEXt", b"Software\0procgen-like")], False),
+        ([(b"tEXt", b"Software\0another")], False),
+        ([(b"tEXt", b"Comment\0procgen")], False),
+        ([(b"tEXt", b"Comment\0<!-- procgen -->")], False),  # the mark of an SVG
+    ],
+)
+def test_a_png_is_ours_by_its_software(chunks, ours, tmp_path):
+    file = tmp_path / "a.png"
+    file.write_bytes(png(*chunks))
+    assert is_ours(file) is ours
+    if ours:
+        assert place_for(file) == file
+    else:
+        with pytest.raises(PictureError, match="is no picture or page of procgen; choose another name"):
+            place_for(file)
 
 
 def test_a_png_by_matplotlib(out, tmp_path):

@@ -48,14 +48,15 @@ def place_for(path: Path, overwrite: bool = False) -> Path:
 
 
 def is_ours(path: Path) -> bool:
-    """Whether a file says that procgen wrote it."""
+    """Whether a file says that procgen wrote it; a PNG in a chunk tEXt (W3C PNG, textual data)."""
     try:
         with path.open("rb") as file:
             head = file.read(_HEAD)
     except OSError:
         return False
     if head.startswith(b"\x89PNG"):
-        return b"tEXtSoftware\0" + MARKS["png"].encode() in head
+        text = b"Software\0" + MARKS["png"].encode()
+        return len(text).to_bytes(4, "big") + b"tEXt" + text in head
     return any(MARKS[sort].encode() in head for sort in ("html", "svg"))
 
 
