@@ -135,8 +135,12 @@ def _log_nearer(scores: Scores, known: Sequence[Far], room: float, n: int) -> fl
     return n * math.log1p(-2.0 * max(tail, _CLIPPED))
 
 
-def ties(series: str, known: Sequence[Far]) -> Iterator[Check]:
-    """Whether several of the farthest shocks of a continuous law are one and the same."""
+def ties(series: str, scores: Scores, known: Sequence[Far], n: int) -> Iterator[Check]:
+    """Whether several of the farthest of n shocks of a continuous law are one and the same.
+
+    Those outside what the law allows are not of interest: they are told of as such, and no cut made them.
+    """
+    known = [far for far in known if judge.of_many(math.log(2.0) + _log_tail(scores, far, 0.0), n) >= _OUTSIDE]
     groups: list[list[Far]] = []
     for far in sorted(known, key=lambda far: (far[0], abs(far[3])), reverse=True):
         last = groups[-1][-1] if groups else [math.inf] * 5

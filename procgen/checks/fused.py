@@ -156,18 +156,20 @@ def _halved(rows, out):
 
 
 @compiled_function
-def looked(x, weights, prints, low, high):
-    """Add the fingerprints of values x to prints, and fill the extremes of each step; whether all are finite."""
+def looked(x, weights, prints, low, high, zeros):
+    """Add the fingerprints of values x to prints, fill extremes and zeros of each step; whether all are finite."""
     steps, paths = x.shape
     finite = True
     for t in range(steps):
         bits, signed = x[t].view(np.uint64), x[t].view(np.int64)
-        least, most = _SIZE, -_SIZE
+        least, most, none = _SIZE, -_SIZE, 0
         for p in range(paths):
+            none += (bits[p] << np.uint64(1)) == 0
             prints[p] += (bits[p] ^ (bits[p] >> np.uint64(32))) * weights[t]
             key = signed[p] ^ ((signed[p] >> 63) & _SIZE)  # ordered as the values are
             least, most = min(least, key), max(most, key)
         finite = finite and most < _ENDLESS and least > ~_ENDLESS
+        zeros[t] = none
         low[t], high[t] = least ^ ((least >> 63) & _SIZE), most ^ ((most >> 63) & _SIZE)
     return finite
 

@@ -232,7 +232,7 @@ class Gather:
         return [values for values in found if values.dtype == kind]
 
 
-_FACTS = ("not_finite", "off_grid", "narrow", "far", "beyond", "outside", "moved", "runs")
+_FACTS = ("not_finite", "off_grid", "narrow", "far", "beyond", "outside", "moved", "zeros", "ends", "runs")
 
 
 def _lags(plan: SeriesPlan) -> tuple[int, ...]:

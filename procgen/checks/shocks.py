@@ -213,7 +213,8 @@ class ShockSums:
         level = np.where(some, lane.totals[0] / np.sqrt(n), 0.0)
         spread = np.where(some, apart.spreads(lane.totals[1], n), 0.0)
         self.paths += across(np.array([some.astype(float), level * level, spread * spread, level, spread]))
-        slope = np.where(some, lane.totals[FIRST_LAG] / np.where(some, lane.totals[1], 1.0), 0.0) * np.sqrt(n + 2.0)
+        moved = lane.totals[1] > 0.0
+        slope = np.where(moved, lane.totals[FIRST_LAG] / np.where(moved, lane.totals[1], 1.0), 0.0) * np.sqrt(n + 2.0)
         self.ends = apart.merged(self.ends, apart.ends_of(level, spread, slope, lane.length, lane.first_path))
         lengths, paths = np.unique(lane.length[some], return_counts=True)
         self.chains.update(dict(zip(lengths.tolist(), paths.tolist(), strict=True)))

@@ -12,15 +12,20 @@ from numpy.typing import NDArray
 from procgen.checks import copies, extremes, support
 from procgen.checks.blocks import compiled
 from procgen.checks.verdict import Check
-from procgen.checks.words import many
+from procgen.checks.words import many, number
 
 _AT_ONCE = 1 << 14  # values of a fingerprint: what is computed on the way stays in the cache
 _SAMPLE = 61  # every so manieth step's bits are looked at for a detour through float32; at least 32 steps
 _SPACING = {"float32": 2.0**-24 + 4e-16}  # how far, of its size, a stored decimal number may lie from itself
 _GRIDS = {1: 10.0, 2: 100.0, 3: 1000.0}  # decimals to which values may be seen to be rounded
-_UNSEEN = (0, 0, 0, 0, 0, *(0 for _ in _GRIDS))  # that fit float32, whole ones, all, that fit float16, zeros; by grid
+_UNSEEN = (0, 0, 0, 0, *(0 for _ in _GRIDS))  # that fit float32, whole ones, all, that fit float16; by grid
 _MOST = 0.9  # share of values that must be rounded
 _CERTAIN = 1e-12  # expected number of equal pairs below which one equal pair is no chance
+_WHOLE = 2.0**40  # size beyond which a number may have no digits after the point without being rounded
+ZEROS, _FILLED = "values that are 0", 4  # so many zeros are no chance where each of them is a rarity
+_ENDS = np.fmin, np.fmax
+_BEGUN = 16  # zeros of earlier steps may say that values begin late, which is another fault, or that they begin at 0
+_RARITY = _CERTAIN ** (1 / _FILLED)  # expected zeros, at most
 
 
 @dataclass
@@ -51,6 +56,8 @@ class Structure:
     beyond: dict[str, list[int]] = field(default_factory=dict)  # series -> numbers of values outside, and absurd ones
     outside: dict[str, support.Found] = field(default_factory=dict)  # series -> values that it cannot give
     moved: dict[str, support.Found] = field(default_factory=dict)  # series -> values that should have been held
+    zeros: dict[str, list[int]] = field(default_factory=dict)  # series -> [count, path, step] of zeros
+    ends: dict[str, list[float]] = field(default_factory=dict)  # series -> the least and the largest value of a sample
     runs: dict[str, copies.Run] = field(default_factory=dict)  # series -> its longest run of one value
     marks: dict[str, copies.Marks] = field(default_factory=dict)  # series -> stretches that would show in a copy
     prints: list[tuple[int, NDArray[np.uint64]]] = field(default_factory=list)  # (first path, (paths, series))
@@ -58,7 +65,12 @@ class Structure:
     def absorb(self, column: int, x: NDArray, first_path: int, first_step: int, prints: NDArray[np.uint64]) -> bool:
         """Look at a tile (steps, paths) of one series; `prints` (paths,) is updated. True when all is finite."""
         what = self.series[column]
-        finite, ends = _looked(x, first_step, prints)
+        finite, ends, zeros = _looked(x, first_step, prints)
+        begun = max(_BEGUN - first_step, 0)
+        if zeros[begun:].any() and what.repeats is not None:
+            here = x == 0.0
+            here[:begun] = False
+            _note(self.zeros, what.name, here, first_path, first_step)
         wrong = None if finite else np.isinf(x) if what.gaps else ~np.isfinite(x)
         if wrong is not None and wrong.any():
             _note(self.not_finite, what.name, wrong, first_path, first_step)
@@ -74,12 +86,16 @@ class Structure:
             sample = sample[~np.isnan(sample)] if what.gaps else sample
             with np.errstate(over="ignore", invalid="ignore"):
                 fits = int(np.count_nonzero(sample.astype(np.float32) == sample))
-                whole = int(np.count_nonzero(np.rint(sample) == sample))
+                small = np.abs(sample) < _WHOLE
+                whole = int(np.count_nonzero((np.rint(sample) == sample) & small))
                 half = int(np.count_nonzero(sample.astype(np.float16) == sample)) if fits else 0
-                grids = [int(np.count_nonzero(np.rint(sample * s) / s == sample)) for s in _GRIDS.values()]
+                grids = [int(np.count_nonzero((np.rint(sample * s) / s == sample) & small)) for s in _GRIDS.values()]
             seen = self.narrow.setdefault(what.name, [0] * len(_UNSEEN))
-            for k, count in enumerate((fits, whole, sample.size, half, int(np.count_nonzero(sample == 0.0)), *grids)):
+            for k, count in enumerate((fits, whole, sample.size, half, *grids)):
                 seen[k] += count
+            if sample.size:
+                ends_here = [float(end.reduce(sample, None)) for end in _ENDS]
+                self.ends[what.name] = _wider(self.ends.get(what.name), ends_here)
         if what.reach is not None:
             self.far[what.name] = what.reach.farthest(x, first_path, first_step, self.far.get(what.name, ()), ends)
             more = what.reach.beyond(x, first_step, ends)
@@ -131,12 +147,15 @@ class Structure:
         return paths, np.concatenate([rows for _, rows in self.prints])
 
     def merge(self, other: Structure) -> None:
-        for mine, theirs in ((self.not_finite, other.not_finite), (self.off_grid, other.off_grid)):
+        books = (self.not_finite, other.not_finite), (self.off_grid, other.off_grid), (self.zeros, other.zeros)
+        for mine, theirs in books:
             for name, (count, path, step) in theirs.items():
                 old = mine.setdefault(name, [0, path, step])
                 mine[name] = [old[0] + count, *min((old[1], old[2]), (path, step))]
         for name, counts in other.narrow.items():
             self.narrow[name] = [a + b for a, b in zip(self.narrow.get(name, _UNSEEN), counts, strict=True)]
+        for name, ends in other.ends.items():
+            self.ends[name] = _wider(self.ends.get(name), ends)
         for name, values in other.far.items():
             self.far[name] = extremes.merged([*self.far.get(name, ()), *values])
         for name, counts in other.beyond.items():
@@ -154,6 +173,7 @@ class Structure:
         for what in self.series:
             yield self._finite(what)
             yield self._precision(what)
+            yield from self._zeros(what)
             yield from support.checks(what.name, what.possible, self.outside.get(what.name), self.moved.get(what.name))
             if what.reach is not None:
                 n = self.steps * sum(len(rows) for _, rows in self.prints)
@@ -174,6 +194,23 @@ class Structure:
         every = "every value that is there" if what.gaps else "every value"
         return Check.fact(name, "finite values", "all steps", fault, f"{every} is a finite number")
 
+    def _zeros(self, what: Precision) -> Iterator[Check]:
+        n = self.steps * sum(len(rows) for _, rows in self.prints)
+        if what.repeats is None or n * what.repeats.chance > _RARITY:
+            return
+        count, path, step = self.zeros.get(what.name, (0, -1, -1))
+        low, high = self.ends.get(what.name, (-1.0, 1.0))
+        fault = (
+            f"{count:,} values are exactly 0, the first at path {path}, step {step}, as if it stood for what is missing"
+        )
+        fits, _, seen, *_ = self.narrow.get(what.name, _UNSEEN)
+        if count and (self._grid(what) is not None or fits > _MOST * seen):
+            note = "values are rounded, so that 0 may be one of them"
+            yield Check(what.name, ZEROS, "all steps", "structure", outcome="untestable", note=note)
+            return
+        fault = fault if count >= _FILLED and low < high else ""
+        yield Check.fact(what.name, ZEROS, "all steps", fault, "as good as no value is exactly 0")
+
     def _precision(self, what: Precision) -> Check:
         declared = what.type if what.decimals is None else f"{what.type}, {what.decimals} decimals"
         fault = ""
@@ -183,25 +220,27 @@ class Structure:
                 f"{count} value{'s have' if count > 1 else ' has'} more than the {what.decimals} decimals declared, "
                 f"the first at path {path}, step {step}"
             )
-        fits, whole, seen, half, zeros, *_ = self.narrow.get(what.name, _UNSEEN)
+        fits, whole, seen, half, *_ = self.narrow.get(what.name, _UNSEEN)
         if what.type == "float64" and seen >= 32 and fits > _MOST * seen:
             type = "float16" if half > _MOST * seen else "float32"
             mend = "" if type == "float16" else "; write `type: float32` if that is meant"
             fault = f"values went through {type} (all fit in it), where float64 is declared{mend}"
         if what.type == "float64" and seen >= 32 and whole > _MOST * seen:
             fault = "values are rounded to whole numbers, where no rounding (`decimals: 0`) is declared"
-            fault = "all values are 0" if zeros == seen else fault
         decimals = self._grid(what)
         if decimals and any(row.outcome == "departs" for row in self._repeated(what, what.repeats)):
             grid = many(decimals, "decimal")
             fault = f"values are rounded to {grid}, which is not declared; write `decimals: {decimals}`"
         if what.type == "float32" and fits < seen:
             fault = "values are finer than float32, which is declared"
+        low, high = self.ends.get(what.name, (math.nan, math.nan))
+        if low == high and seen >= 32:
+            fault = f"all values are {number(low, 6)}"
         return Check.fact(what.name, "precision", "all steps", fault, f"as declared: {declared}")
 
     def _grid(self, what: Precision) -> int | None:
         """The decimals to which values are seen to be rounded though none are declared; None where they are not."""
-        _, whole, seen, _, _, *grids = self.narrow.get(what.name, _UNSEEN)
+        _, whole, seen, _, *grids = self.narrow.get(what.name, _UNSEEN)
         if what.decimals is not None or seen < 32:
             return None
         counts = {0: whole, **dict(zip(_GRIDS, grids, strict=True))}
@@ -278,21 +317,25 @@ def _equal(prints: NDArray, paths: NDArray) -> tuple[int, int, int]:
     return int(same.sum()), int(paths[order[second - 1]]), int(paths[order[second]])
 
 
+def _wider(a: Sequence[float] | None, b: Sequence[float]) -> list[float]:
+    return list(b) if a is None else [float(end(*both)) for end, *both in zip(_ENDS, a, b, strict=True)]
+
+
 def _looked(
     x: NDArray, first_step: int, prints: NDArray[np.uint64]
-) -> tuple[bool, tuple[NDArray, NDArray] | None]:
-    """Whether all values are finite, and if so, the extremes of each step; their fingerprints are added to `prints`."""
+) -> tuple[bool, tuple[NDArray, NDArray] | None, NDArray]:
+    """Whether all values are finite, if so the extremes of each step, and its zeros; `prints` takes fingerprints."""
     if compiled(x.shape[1]):
         from procgen.checks import fused
 
-        low, high = np.empty((2, len(x)), dtype=np.int64)
-        finite = fused.looked(np.ascontiguousarray(x), _weights(first_step, len(x)), prints, low, high)
+        low, high, zeros = np.empty((3, len(x)), dtype=np.int64)
+        finite = fused.looked(np.ascontiguousarray(x), _weights(first_step, len(x)), prints, low, high, zeros)
         ends = low.view(float), high.view(float)
     else:
         prints += fingerprint(x, first_step)
-        ends = x.min(axis=1), x.max(axis=1)
+        ends, zeros = (x.min(axis=1), x.max(axis=1)), np.count_nonzero(x == 0.0, axis=1)
         finite = bool(np.isfinite(ends).all())
-    return finite, ends if finite else None
+    return finite, ends if finite else None, zeros
 
 
 def fingerprint(x: NDArray, first_step: int) -> NDArray[np.uint64]:

@@ -277,7 +277,7 @@ def _shocks(gather: Gather, name: str) -> Iterator[Check]:
     yield from farthest.checks(name, sums.scores, sums.far, sums.n, noise, ranks)
     points = getattr(sums.scores.law, "points", None) is not None or lumpy(way.theory)
     if not (ranks or points or noise or way.grain):
-        yield from farthest.ties(name, sums.far)
+        yield from farthest.ties(name, sums.scores, sums.far, sums.n)
     if name in gather.events:
         yield from gather.events[name].checks(name)
 

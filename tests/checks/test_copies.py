@@ -8,6 +8,7 @@ import pytest
 from procgen.checks import copies
 from procgen.checks.copies import COPIED, STUCK, Repeats, Watch, checks
 from procgen.checks.lane import Pass
+from procgen.checks.structure import ZEROS
 from procgen.checks.validate import gathered, judged, plan_of
 from procgen.checks.verdict import Verdict
 from tests.studies.departures import draw, spec_of
@@ -104,6 +105,32 @@ def test_a_stuck_sensor_and_a_frozen_path_are_named(true):
     assert notes(spoiled(true, frozen)) == {STUCK: "450 equal values in a row at path 9, steps 50–499, as if stuck"}
 
 
+def filled(x):
+    x[::7, 20::30] = 0.0
+
+
+def test_gaps_that_are_filled_with_zeros_are_told(true):
+    body, x = true
+    found = spoiled(true, filled)
+    assert np.count_nonzero(x == 0.0) == 0
+    if isinstance(body, dict):  # of 2 decimals: 0 is a value like any other
+        assert ZEROS not in {row.what for row in found.rows}
+        return
+    (row,) = [row for row in found.rows if row.what == ZEROS]
+    assert row.note == "288 values are exactly 0, the first at path 0, step 20, as if it stood for what is missing"
+    assert {row.outcome for row in verdict(body, {"x": x}).rows if row.what == ZEROS} == {"agrees"}
+
+
+def test_a_walk_may_begin_at_zero():
+    body = [{"random_walk": {"sd": 1}}]
+    x = draw(spec_of(body, PATHS, STEPS, 3))["x"]
+    assert not x[:, 0].any()
+    assert {row.outcome for row in verdict(body, {"x": x}).rows if row.what == ZEROS} == {"agrees"}
+    x[3:7, 29] = 0.0
+    (row,) = [row for row in verdict(body, {"x": x}).rows if row.what == ZEROS]
+    assert row.note.startswith("4 values are exactly 0, the first at path 3, step 29")
+
+
 def test_the_least_lengths_follow_from_the_chance_of_a_cell():
     # 1e10 values and a chance of 0.004 a step: 1e10 q^(n-1) < 1e-12 from n = 11 on, and 1e20 q^m < 1e-12 from 14 on.
     assert Repeats(0.004).stays == 1 + 10
@@ -189,3 +216,4 @@ def test_no_family_repeats_by_chance(family):
         run, marks = watch.finish()
         found = checks(what.name, what.repeats, run, marks, np.arange(64), np.arange(64))
         assert [row.note for row in found if row.outcome == "departs"] == [], column
+        assert what.repeats.chance > 1e-9 or not np.count_nonzero(values[what.name][:, 1:] == 0.0), column

@@ -109,17 +109,19 @@ def test_marks_and_runs_of_values(cuts, paths):
 def test_fingerprints_and_extremes(wrong):
     x = RNG.standard_normal((70, 33)) * 10.0 ** RNG.integers(-300, 300, (70, 33))
     x[3], x[4], x[5, 0] = -np.abs(x[3]), np.abs(x[4]), -0.0
+    x[6, 1:4] = 0.0
     if wrong is not None:
         x[60, 7] = wrong
 
     def run():
         prints = np.arange(33, dtype=np.uint64)
-        finite, ends = _looked(x, 640, prints)
+        finite, ends, zeros = _looked(x, 640, prints)
         low, high = ends or (None, None)
-        return {"prints": prints, "finite": finite, "low": low, "high": high}
+        return {"prints": prints, "finite": finite, "low": low, "high": high, "zeros": zeros}
 
     plain, compiled = both(run)
     same(plain, compiled)
+    np.testing.assert_array_equal(compiled["zeros"], (x == 0.0).sum(axis=1))
     assert plain["finite"] is (wrong is None)
     if wrong is None:
         np.testing.assert_array_equal(compiled["low"], x.min(axis=1))

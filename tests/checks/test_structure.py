@@ -92,3 +92,16 @@ def test_values_on_a_grid_are_told_as_rounded_and_not_as_copies():
     rows = verdict(body, {"x": gaps}).rows
     assert any("all of them are this value, as if it marked what is missing" in row.note for row in rows)
     assert not any("as if stuck" in row.note for row in rows)
+
+
+def test_a_series_of_one_value_is_told_as_such():
+    for value, told in ((0.0, "0"), (5.0, "5"), (-3.7, "−3.7")):
+        assert looked_at(np.full((50, 40), value))["precision"].note == f"all values are {told}"
+    x = np.full((50, 40), 5.0)
+    x[3, 7] = 6.0
+    assert "rounded to whole numbers" in looked_at(x)["precision"].note
+
+
+def test_numbers_too_large_for_digits_are_not_called_rounded():
+    assert looked_at(noise() * 1e200)["precision"].outcome == "agrees"
+    assert looked_at(noise() * 1e15)["precision"].outcome == "agrees"
