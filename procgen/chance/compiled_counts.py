@@ -160,26 +160,23 @@ def uniforms(z, per_root_12, out):
 
 
 @compiled_function
-def thinned(x, new, stay, grid, keys, offset, first, out):
+def thinned(x, new, stay, grid, keys, guide, cells, zero, out):
     """Rows of counts from x before them: who stays of the last ones, and the new ones.
 
-    keys, offset, first: of a `Thinning`; rows stop before a count that is beyond it. Returns how many there are.
+    keys, guide, cells, zero: of a `Thinning`; rows stop before a count that is beyond it. Returns how many there are.
+    By a guide nearly all are found at once: a search by halves is wrongly foreseen by the processor at every turn.
     """
-    most = offset.shape[0] - 1
+    most, end = zero.shape[0] - 1, keys.shape[0]
     for t in range(new.shape[0]):
         last = x if t == 0 else out[t - 1]
         for lane in range(x.shape[0]):
             if last[lane] > most:
                 return t
         for lane in range(x.shape[0]):
-            n = int(last[lane])
-            place = np.int64(np.floor(stay[t, lane] * grid)) + (np.int64(n) << np.int64(52))
-            low, high = offset[n], keys.shape[0] if n == most else offset[n + 1]
-            while low < high:
-                middle = (low + high) >> 1
-                if keys[middle] <= place:
-                    low = middle + 1
-                else:
-                    high = middle
-            out[t, lane] = float(low - offset[n] + first[n]) + new[t, lane]
+            n = np.int64(last[lane])
+            place = np.int64(np.floor(stay[t, lane] * grid)) + (n << np.int64(52))
+            low = np.int64(guide[place >> cells])
+            while low < end and keys[low] <= place:
+                low = low + 1
+            out[t, lane] = float(low - zero[n]) + new[t, lane]
     return new.shape[0]

@@ -24,6 +24,7 @@ Array = np.ndarray
 GRID = 2.0**52
 _SHIFT = 42
 _CELLS = 1 << (52 - _SHIFT)
+_THINNED = 46  # 64 cells for each number of those who may stay
 _TOGETHER = 64  # binomial laws tabled at once
 LONGEST = 1_000_000  # chances in a table
 _PER_ROOT_12 = 0.2886751345948129
@@ -204,15 +205,16 @@ class Thinning:
             first.append(np.count_nonzero(places < 1, axis=1))
             lengths.append(np.count_nonzero(seen, axis=1))
             keys.append((places + (n << 52)[:, None])[seen])
-        self.keys, self.first = np.concatenate(keys), np.concatenate(first).astype(np.int64)
+        self.keys = np.concatenate(keys)
         ends = np.add.accumulate(np.concatenate(lengths))
-        self.offset = np.concatenate([np.zeros(1, np.int64), ends[:-1]])
+        # for each n the place of its key that is a count of 0
+        self.zero = np.concatenate([np.zeros(1, np.int64), ends[:-1]]) - np.concatenate(first)
 
     def counts(self, n: Array, u: Array) -> Array:
         """How many of n stay, for uniforms u; both of one shape, n whole and at most `most`."""
         n = n.astype(np.int64)
         place = np.searchsorted(self.keys, np.floor(u * GRID).astype(np.int64) + (n << 52), side="right")
-        return (place - self.offset[n] + self.first[n]).astype(np.float64)
+        return (place - self.zero[n]).astype(np.float64)
 
     def moved(self, x: Array, new: Array, stay: Array) -> Array:
         """Rows of counts from x before them: those who stay for uniforms `stay`, and the new ones.
@@ -223,7 +225,7 @@ class Thinning:
         if is_compiling():
             from procgen.chance.compiled_counts import thinned
 
-            return out[: thinned(x, new, stay, GRID, self.keys, self.offset, self.first, out)]
+            return out[: thinned(x, new, stay, GRID, self.keys, self.guide, _THINNED, self.zero, out)]
         if new.shape[1] == 1:
             return self._moved_alone(int(x[0]), new[:, 0].tolist(), stay[:, 0])
         for t in range(len(new)):
@@ -232,11 +234,16 @@ class Thinning:
             x = np.add(self.counts(x, stay[t]), new[t], out=out[t])
         return out
 
+    @cached_property
+    def guide(self) -> Array:
+        """For each cell of equal uniforms of each n the place of the first key beyond the cell's first uniform."""
+        cells = np.arange((self.most + 1) << (52 - _THINNED), dtype=np.int64) << _THINNED
+        return np.searchsorted(self.keys, cells, side="right").astype(np.int32)
 
     @cached_property
     def _lists(self) -> tuple[list[int], list[int]]:
-        """The keys, and for each n the place of its key that is a count of 0."""
-        return self.keys.tolist(), (self.offset - self.first).tolist()
+        """The keys, and `zero`."""
+        return self.keys.tolist(), self.zero.tolist()
 
     def _moved_alone(self, x: int, new: list[float], stay: Array) -> Array:
         """`moved` of one path, by whole numbers of Python, which are quicker than arrays of one."""

@@ -32,11 +32,11 @@ def test_counts_compiled_are_counts_plain(mean, size):
 
 
 @needs_numba
-@pytest.mark.parametrize(("alpha", "most"), [(0.6, 15), (0.01, 31), (0.999, 63)])
+@pytest.mark.parametrize(("alpha", "most"), [(0.6, 15), (0.01, 31), (0.999, 63), (0.7, 2047), (0.0, 31)])
 def test_thinning_compiled_is_thinning_plain(alpha, most):
     shape = (50, 40)
     new, stay = RNG.poisson(5 * (1 - alpha), shape).astype(float), U[RNG.integers(0, len(U), shape)]
-    new[30, 7] = 100.0  # beyond the table: rows end there
+    new[30, 7] = most + 40.0  # beyond the table: rows end there
     x = RNG.poisson(5, shape[1]).astype(float)
     plain = thinning(alpha, most).moved(x, new, stay)
     with kernel.compiling():
