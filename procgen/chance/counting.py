@@ -67,39 +67,60 @@ def poisson(u: Array, mean: Array) -> Array:
 
 def negative_binomial(u: Array, mean: Array, size: float) -> Array:
     """Negative binomial counts with variance mean + mean^2 / size, elementwise; nan as for `poisson`."""
-    return _by_blocks(lambda u, m: _negative_binomial(u, m, size), u, mean)
+    return _by_blocks(lambda u, m, times: _negative_binomial(u, m, times, size), u, mean)
 
 
-def _by_blocks(function: Callable[[Array, Array], Array], u: Array, mean: Array) -> Array:
-    u, mean = np.broadcast_arrays(u, mean)
+def _by_blocks(function: Callable[[Array, Array, int], Array], u: Array, mean: Array) -> Array:
+    """function(uniforms, means, times) block by block; each mean is that of so many uniforms in a row."""
+    u, mean = np.asarray(u), np.asarray(mean)
+    times = u.shape[-1] if u.ndim == mean.ndim == 2 and mean.shape == (len(u), 1) else 1
+    if not 0 < times <= BLOCK:
+        times = 1
+    if times == 1:
+        u, mean = np.broadcast_arrays(u, mean)
     out = np.empty(u.shape)
-    flat, uniforms, means = out.reshape(-1), u.reshape(-1), mean.reshape(-1)
-    for start in range(0, len(flat), BLOCK):
-        part = slice(start, start + BLOCK)
-        m = means[part]
+    flat, uniforms, means, at_once = out.reshape(-1), u.reshape(-1), mean.reshape(-1), BLOCK // times
+    for start in range(0, len(means), at_once):
+        m, part = means[start : start + at_once], slice(start * times, (start + at_once) * times)
         if m.min() >= 0.0 and m.max() <= LARGEST:  # as a rule; not where one is nan
-            flat[part] = function(uniforms[part], m)
+            flat[part] = function(uniforms[part], m, times)
             continue
         sound = (m >= 0.0) & (m <= LARGEST)
-        counts = function(uniforms[part], np.where(sound, m, 0.0))
-        flat[part] = np.where(sound, counts, np.nan)
+        counts = function(uniforms[part], np.where(sound, m, 0.0), times)
+        flat[part] = np.where(np.repeat(sound, times), counts, np.nan)
     return out
 
 
-def _poisson(u: Array, mean: Array) -> Array:
-    out = np.empty(u.shape)
-    small = mean < _SMALL
-    at: Any = np.flatnonzero(small)
-    if len(at) == len(u):
-        out, at = _summed("poisson", u, exp(-mean), (mean,), lambda k, i: mean[i] / k)
-    elif len(at):
-        m = mean[at]
-        out[at], left = _summed("poisson", u[at], exp(-m), (m,), lambda k, i: m[i] / k)
-        at = np.concatenate([at[left], np.flatnonzero(~small)])
+def _poisson(u: Array, mean: Array, times: int) -> Array:
+    def summed(u: Array, mean: Array, times: int) -> tuple[Array, Array]:
+        nothing, m = _repeated(times, exp(-mean), mean)
+        return _summed("poisson", u, nothing, (m,), lambda k, i: m[i] / k)
+
+    return _found(u, mean, times, summed, _poisson_by_area)
+
+
+def _repeated(times: int, *parts: Array) -> tuple[Array, ...]:
+    return parts if times == 1 else tuple([np.repeat(part, times) for part in parts])
+
+
+def _found(
+    u: Array,
+    mean: Array,
+    times: int,
+    summed: Callable[[Array, Array, int], tuple[Array, Array]],
+    by_area: Callable[[Array, Array], Array],
+) -> Array:
+    """Counts by adding up chances where the mean is small, and by areas elsewhere and where that was not enough."""
+    if mean.max() < _SMALL:
+        out, at = summed(u, mean, times)
     else:
-        at = np.flatnonzero(~small)
+        (mean,), times = _repeated(times, mean), 1
+        out, small = np.empty(u.shape), mean < _SMALL
+        at = np.flatnonzero(small)
+        out[at], left = summed(u[at], mean[at], 1)
+        at = np.concatenate([at[left], np.flatnonzero(~small)])
     if len(at):
-        out[at] = _poisson_by_area(u[at], mean[at])
+        out[at] = by_area(u[at], mean[at // times])
     return out
 
 
@@ -213,27 +234,24 @@ def _poisson_areas(k: Array, mean: Array) -> tuple[Array, Array, Array]:
 def _below(k: Array, chance: Array, mean: Array) -> Array:
     """P(X <= k) of Poisson counts from P(X = k), for k far below the mean."""
     total, term = chance, chance
-    while (term > _FOUND * total).any():
+    while (adding := term > _FOUND * total).any():
         term = term * k / mean
         k = np.maximum(k - 1.0, 0.0)
-        total = total + term
+        total = np.where(adding, total + term, total)  # each ends by itself, as above
     return total
 
 
-def _negative_binomial(u: Array, mean: Array, size: float) -> Array:
-    share, out = mean / (mean + size), np.empty(u.shape)  # of the next chance in the last one, far up
-    small = mean < _SMALL
-    at = np.flatnonzero(small)
-    m = share[at]
-    nothing = exp(-size * log1p(mean[at] / size))
+def _negative_binomial(u: Array, mean: Array, times: int, size: float) -> Array:
     ratios = (_STEPS - 1.0 + size) / _STEPS
-    out[at], left = _summed(
-        "negative_binomial", u[at], nothing, (m, size, ratios), lambda k, i: (k - 1.0 + size) / k * m[i]
-    )
-    at = np.concatenate([at[left], np.flatnonzero(~small)])
-    if len(at):
-        out[at] = _negative_binomial_by_area(u[at], mean[at], size)
-    return out
+
+    def summed(u: Array, mean: Array, times: int) -> tuple[Array, Array]:
+        share = mean / (mean + size)  # of the next chance in the last one, far up
+        nothing, m = _repeated(times, exp(-size * log1p(mean / size)), share)
+        return _summed(
+            "negative_binomial", u, nothing, (m, size, ratios), lambda k, i: (k - 1.0 + size) / k * m[i]
+        )
+
+    return _found(u, mean, times, summed, lambda u, m: _negative_binomial_by_area(u, m, size))
 
 
 def _negative_binomial_by_area(u: Array, mean: Array, size: float) -> Array:
