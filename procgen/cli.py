@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from pathlib import Path
-from typing import Annotated
+from typing import Annotated, Any
 
 import typer
 
@@ -19,7 +19,9 @@ from procgen.options import (
     as_expected,
     asked,
     expected,
+    named,
     one_asked,
+    refuse_any,
     share,
     steps_of,
     whole,
@@ -153,25 +155,23 @@ def render(
     if variant == "all" and len(specs) == 1:
         said(f"the spec has no variants; {within(out, 'base')} has it as written, and there is nothing beside it")
     wanted = None if expect is None else expected(expect, specs)
+    size: dict[str, Any] = {"paths": paths, "first_path": first_path, "steps": steps, "seed": seed}
+    form: dict[str, Any] = {"layout": layout, "columns": columns, "partition": partition, "reveal": reveal}
+    if not overwrite:
+        refuse_any(specs, out, resume=resume, **size, **form)
     for name, loaded in specs.items():
         folder = within(out, name)
-        with progress(f"drawing {name}".strip()) as tick:
+        with progress(f"drawing {name}".strip()) as tick, named(name):
             pg.render(
                 loaded,
                 folder,
-                paths=paths,
-                first_path=first_path,
-                steps=steps,
-                seed=seed,
                 workers=workers,
-                layout=layout,
-                columns=columns,
-                partition=partition,
-                reveal=reveal,
                 resume=resume,
                 overwrite=overwrite,
                 scheduler=scheduler,
                 progress=tick,
+                **size,
+                **form,
             )
         printed(rendered(pg.open_ensemble(folder)))
     if len(specs) > 1:

@@ -3,9 +3,10 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Callable, Iterable, Mapping
+from collections.abc import Callable, Iterable, Iterator, Mapping
+from contextlib import contextmanager
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated
+from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
@@ -126,6 +127,34 @@ def one_asked(file: Path, variant: str | None, settings: list[str] | None, start
 def within(out: str, name: str) -> str:
     """The folder of one of several ensembles; OUT itself where there is no name."""
     return os.path.join(out, name) if name and out else out
+
+
+def refuse_any(specs: Mapping[str, Spec], out: str, **options: Any) -> None:
+    """Of several specs, refuse what is in the way of any before the first is drawn. EnsembleError lists them all."""
+    from procgen.ensemble.errors import EnsembleError
+    from procgen.ensemble.job import refuse
+
+    faults = []
+    for name, spec in specs.items() if len(specs) > 1 else ():
+        try:
+            refuse(spec, within(out, name), **options)
+        except EnsembleError as error:
+            faults.append(str(error))
+    if faults:
+        raise EnsembleError("\n".join(["nothing is drawn, for not all variants can be:", *faults]))
+
+
+@contextmanager
+def named(variant: str) -> Iterator[None]:
+    """Errors of an ensemble say of which variant they are, where there are several."""
+    from procgen.ensemble.errors import EnsembleError
+
+    try:
+        yield
+    except EnsembleError as error:
+        if not variant:
+            raise
+        raise EnsembleError(f"variant {variant}: {error}") from None
 
 
 def expected(given: str, specs: dict[str, Spec]) -> Expected:

@@ -90,8 +90,41 @@ def render(
         folder = folder_path(out, "out")
     if workers is not None:
         _whole("workers", workers, 1)
-    spec = spec_of(spec) if factory == FACTORY else spec
     changes = {"paths": paths, "steps": steps, "seed": seed}
+    spec, source, whole, names = _source(spec, changes, first_path, reveal, factory)
+    if out is None:
+        return _in_memory(source, whole, progress)
+    job = Job(spec, source, whole, Folder(folder), names, asked, factory)
+    if workers is None and scheduler is None:
+        workers = engines.default_workers(whole.rows * len(source.columns))
+    return job.run(workers, scheduler, resume, overwrite, progress)
+
+
+def refuse(
+    spec: Any,
+    out: str | Path,
+    *,
+    paths: int | None = None,
+    first_path: int = 0,
+    steps: int | None = None,
+    seed: int | None = None,
+    reveal: Sequence[str] | str | None = None,
+    layout: str = "long",
+    partition: str | None = None,
+    columns: Mapping[str, str] | None = None,
+    resume: bool = False,
+) -> None:
+    """Raise what `render` of the same would find in `out` and refuse, before anything is drawn; reads no values."""
+    asked, changes = Layout.asked(layout, partition, columns), {"paths": paths, "steps": steps, "seed": seed}
+    spec, source, whole, names = _source(spec, changes, first_path, reveal, FACTORY)
+    Job(spec, source, whole, Folder(folder_path(out, "out")), names, asked, FACTORY).present.refuse(resume)
+
+
+def _source(
+    spec: Any, changes: Mapping[str, int | None], first_path: int, reveal: Sequence[str] | str | None, factory: str
+) -> tuple[Any, Source, Block, tuple[str, ...]]:
+    """The spec with the changes, what draws it, the paths and steps that are wanted, and what is revealed."""
+    spec = spec_of(spec) if factory == FACTORY else spec
     if any(value is not None for value in changes.values()):
         spec = spec.changed(**changes)
     names = _reveal(spec, reveal)
@@ -99,14 +132,7 @@ def render(
     whole = Block(_whole("first_path", first_path, 0), spec.paths, 0, spec.time.steps)
     if max(whole.end_path, whole.steps) > MOST:
         raise EnsembleError(f"expected at most {MOST} paths and steps, got {whole}")
-    if out is None:
-        return _in_memory(source, whole, progress)
-    asked.check(source.columns, source.stamps is not None, range(whole.first_path, whole.end_path))
-    asked.check_files(whole.file(whole), source.columns)
-    job = Job(spec, source, whole, Folder(folder), names, asked, factory)
-    if workers is None and scheduler is None:
-        workers = engines.default_workers(whole.rows * len(source.columns))
-    return job.run(workers, scheduler, resume, overwrite, progress)
+    return spec, source, whole, names
 
 
 def _whole(name: str, value: int, least: int) -> int:
@@ -175,6 +201,9 @@ class Job:
 
     def __post_init__(self) -> None:
         self.columns = [*self.source.columns]
+        paths = range(self.whole.first_path, self.whole.end_path)
+        self.layout.check(self.columns, self.source.stamps is not None, paths)
+        self.layout.check_files(self.whole.file(self.whole), self.columns)
         self.identity = {
             "spec": self.spec.digest(),
             "seed": self.spec.seed,

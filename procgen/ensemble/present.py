@@ -57,6 +57,14 @@ class Present:
         self.damaged = {damage.file for damage in damages}
         return None if damages or found.changed else found
 
+    def refuse(self, resume: bool) -> None:
+        """EnsembleError when another ensemble is there, or an unfinished one without `resume`."""
+        found = self._manifest()
+        if found is None:
+            self.chains(resume)
+        elif not found.changed:
+            self._refuse_other(found.identity)
+
     def chains(self, resume: bool) -> tuple[Chain, ...] | None:
         """The chains of the render that is there, None when there is none; they are kept when it goes on."""
         found = self._manifest()
@@ -154,6 +162,8 @@ class Present:
         names = {"spec": "spec (its digest)"}
         keys = [*self.identity, *(key for key in identity if key not in self.identity and key != "part")]
         differ = [key for key in keys if identity.get(key) != self.identity.get(key)]
+        told = differ == ["spec"] and self.folder.size(MANIFEST) >= 0
+        command = f"; procgen difference {self.folder.path} SPEC tells what differs" if told else ""
         if len(differ) > 1 and "spec" in differ:
             differ.remove("spec")  # it holds seed, paths and steps too, which are easier to read
         if differ:
@@ -161,7 +171,7 @@ class Present:
             found = ", ".join(f"{name} {there} there, {asked} asked" for name, there, asked in pairs)
             raise EnsembleError(
                 f"{self.folder.path} holds an ensemble of another kind ({found}); "
-                "choose another OUT, or remove that one with --overwrite (overwrite=True)"
+                f"choose another OUT, or remove that one with --overwrite (overwrite=True){command}"
             )
 
 
