@@ -61,7 +61,7 @@ class Rows(Domain):
     each: Reals
 
     def describe(self) -> str:
-        return f"a list of rows, each entry {self.each.each.describe()}"
+        return f"a list of rows, as in [[…], […]], each entry {self.each.each.describe()}"
 
     def read(self, tree: Tree, reader: Reading) -> Any:
         if not tree.is_list or not tree.value or not all(t.is_list for t in tree.value):

@@ -18,15 +18,14 @@ from procgen.chance.laws import Normal
 from procgen.chance.portable import cholesky, matmul
 from procgen.spec.declare import Parameter, Reals, Record
 from procgen.spec.named import Matrices, Names, Rows
-from procgen.terms.base import Draw, Term, number, signed
+from procgen.terms.base import Draw, Term, number, signed, stated
 from procgen.terms.start import weigh
 from procgen.terms.structural import with_outputs
+from procgen.terms.vector_shapes import MOST_NAMES, fits, given, one_each, shape, shape_faults
 from procgen.terms.vector_start import VectorStart, state_space
 
 NORMAL = Normal()
-MOST_NAMES, MOST_LAGGED = 20, 60
 UNIT_ROOT = 1e-7  # an eigenvalue nearer to 1 than this counts as 1
-SMALLEST = 1e-10  # of the eigenvalues of a correlation: below it is singular to rounding
 MATRICES = Matrices(Rows(Reals()))
 NAMES = Parameter("names", "", Names(), "its components, by which `use` finds them; its own value is that of the first")
 SPREADS = Parameter(
@@ -92,7 +91,7 @@ class VectorArma(Term):
     @classmethod
     def check(cls, values):
         k, before = len(values["names"]), values["before"]
-        faults = [*shape_faults(values, k, square=("phi", "theta"))]
+        faults = [*shape_faults(values, square=("phi", "theta"))]
         yield from faults
         if faults:
             return
@@ -107,9 +106,11 @@ class VectorArma(Term):
         for name, past, part in (("x", "values", "phi"), ("shocks", "shocks", "theta")):
             if before is None:
                 break
-            if len(before[name]) < len(values[part]) or any(len(row) != k for row in before[name]):
-                need = f"{len(values[part])} or more rows of {k} past {past}"
-                yield "before", f"expected {need} in `{name}` (one a matrix of {part}), got {len(before[name])}"
+            rows, needs = before[name], len(values[part])
+            if len(rows) < needs or not fits(rows, len(rows), k):
+                need = f"{needs} or more rows of {k} past {past} in `{name}` (a row a step, one for each lag of {part})"
+                mend = f"give those of {', '.join(values['names'])} in each row, the last step last"
+                yield "before", f"expected {need}, got {given(rows)}; {mend}"
 
     def __init__(self, values):
         super().__init__(values)
@@ -179,23 +180,36 @@ class VectorArma(Term):
     def equation(self, *inputs):
         return (
             ",  ".join(f"{name}[t] = {self._right(i)}".replace("= + ", "= ") for i, name in enumerate(self.outputs))
-            + f",  {self._spreads()}"
+            + f",  {self._spreads()}{self._left()}"
         )
 
+    def _left(self):
+        """What came before step 0, where that is stated."""
+        if self.before is None:
+            return ""
+        past = (("{}", self.before["x"]), ("ε_{}", self.before["shocks"]))
+        columns = [
+            (form.format(name), column)
+            for form, rows in past
+            for name, column in zip(self.outputs, zip(*rows, strict=True), strict=False)
+        ]
+        return "".join(f",  {stated(name, column)}" for name, column in columns)
+
     def _right(self, row):
+        # ε for shocks, which no component can be named
         terms = [
             signed(matrix[row][j], f"{name}[t−{lag}]")
-            for part, names in ((self.lags, self.outputs), (self.moving, [f"a_{name}" for name in self.outputs]))
+            for part, names in ((self.lags, self.outputs), (self.moving, [f"ε_{name}" for name in self.outputs]))
             for lag, matrix in enumerate(part, start=1)
             for j, name in enumerate(names)
             if matrix[row][j]
         ]
-        return " ".join([*terms, f"+ a_{self.outputs[row]}[t]"])
+        return " ".join([*terms, f"+ ε_{self.outputs[row]}[t]"])
 
     def _spreads(self):
         sds = ", ".join(number(sd) for sd in (self.sd if len(self.sd) == self.k else self.sd * self.k))
         correlated = "correlated" if self.correlation else "independent"
-        return f"sd a = ({sds}), {correlated}"
+        return f"sd ε = ({sds}), {correlated}"
 
 
 class VectorErrorCorrection(VectorArma):
@@ -218,16 +232,19 @@ class VectorErrorCorrection(VectorArma):
     @classmethod
     def check(cls, values):
         k, r = len(values["names"]), len(values["relations"])
-        faults = [*shape_faults(values, k, square=("phi",))]
-        if any(len(row) != k for row in values["relations"]):
-            faults.append(("relations", f"expected rows of {k} weights, one a component"))
+        faults = [*shape_faults(values, square=("phi",))]
+        if not fits(values["relations"], r, k):
+            mend = f"give the weights of {', '.join(values['names'])} in this order, 0 for one that is not in it"
+            expected = f"expected a row of {k} weights for each relation, one a component"
+            faults.append(("relations", f"{expected}, got {given(values['relations'])}; {mend}"))
         if r >= k:
             why = f"with {r} of them nothing wanders; use vector_arma"
             faults.append(("relations", f"expected fewer relations than the {k} components: {why}"))
-        if len(values["adjustment"]) != k or any(len(row) != r for row in values["adjustment"]):
-            faults.append(("adjustment", f"expected {k} rows of {r} (a row a component, a column a relation)"))
-        if len(values["start"]) not in (1, k):
-            faults.append(("start", f"expected {k} values (one a component), or one, got {len(values['start'])}"))
+        if not fits(values["adjustment"], k, r):
+            mend = f"give a row to each of {', '.join(values['names'])}, with a number for each relation, 0 for none"
+            expected = f"expected {shape(k, r)} (a row a component, a column a relation)"
+            faults.append(("adjustment", f"{expected}, got {given(values['adjustment'])}; {mend}"))
+        faults += one_each("start", values["start"], values["names"])
         yield from faults
         if faults:
             return
@@ -288,8 +305,9 @@ class VectorErrorCorrection(VectorArma):
                 for j, other in enumerate(self.outputs)
                 if matrix[i][j]
             ]
-            lines.append(f"Δ{name}[t] = {' '.join([*pulls, *changes, f'+ a_{name}[t]']).removeprefix('+ ')}")
-        return ",  ".join([*lines, self._spreads()])
+            lines.append(f"Δ{name}[t] = {' '.join([*pulls, *changes, f'+ ε_{name}[t]']).removeprefix('+ ')}")
+        first = ", ".join(f"{name}[0] = {number(x)}" for name, x in zip(self.outputs, self.first[:, 0], strict=True))
+        return ",  ".join([*lines, self._spreads(), first])
 
 
 def in_levels(relations, adjustment, phi):
@@ -305,28 +323,6 @@ def spread_factor(k, sd, correlation):
     """Lower factor of the covariance of the shocks."""
     scale = np.array(sd if len(sd) == k else tuple(sd) * k, np.float64)
     return scale[:, None] * (cholesky(np.array(correlation)) if correlation else np.eye(k))
-
-
-def shape_faults(values, k, square):
-    """Faults of sizes: names, matrices that must be k × k, spreads, and the correlation."""
-    if k > MOST_NAMES:
-        yield "names", f"expected at most {MOST_NAMES} components, got {k}"
-    for name in square:
-        if any(len(matrix) != k or any(len(row) != k for row in matrix) for matrix in values[name]):
-            yield name, f"expected matrices of {k} rows of {k} (one a component)"
-    lagged = max((len(values[name]) for name in square), default=0) * k
-    if lagged > MOST_LAGGED:
-        yield square[0], f"expected at most {MOST_LAGGED} lagged values (components times lags), got {lagged}"
-    if len(values["sd"]) not in (1, k):
-        yield "sd", f"expected {k} values, one a component, or one for all, got {len(values['sd'])}"
-    rows = values["correlation"]
-    if rows is None:
-        return
-    matrix = np.array(rows) if len({len(row) for row in rows}) == 1 else np.zeros((0, 0))
-    if matrix.shape != (k, k) or (matrix != matrix.T).any() or (np.diagonal(matrix) != 1.0).any():
-        yield "correlation", f"expected {k} symmetric rows of {k} with 1 on the diagonal"
-    elif (smallest := float(np.linalg.eigvalsh(matrix)[0])) < SMALLEST:
-        yield "correlation", f"expected a positive definite correlation, got the smallest eigenvalue {smallest:.3g}"
 
 
 def eigenvalues(phi):

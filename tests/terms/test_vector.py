@@ -7,6 +7,7 @@ import pytest
 from statsmodels.tsa.vector_ar.var_model import VARProcess
 
 from procgen.chance.kernel import available, compiling
+from procgen.report.equations import equations
 from procgen.spec.model import SpecError
 from procgen.theory import theory
 
@@ -159,15 +160,39 @@ def test_an_appended_component_moves_nobody():
             "{vector_arma: {names: [a, b], phi: [[1.2, 0], [0, 0.5]], sd: 1}}",
             "expected all eigenvalues of the recursion inside the unit circle, got one of size 1.2; shrink phi",
         ),
-        ("{vector_arma: {names: [a, b], phi: [[0.5, 0.1]], sd: 1}}", "expected matrices of 2 rows of 2"),
-        ("{vector_arma: {names: [a, b], sd: [1, 2, 3]}}", "expected 2 values, one a component, or one for all, got 3"),
+        (
+            "{vector_arma: {names: [a, b], phi: [[0.5, 0.1]], sd: 1}}",
+            "expected 2 rows of 2, one a component, got 1 row of 2; give a row to each of a, b, with a weight for "
+            "each of them, 0 for none",
+        ),
+        (
+            "{vector_arma: {names: [a, b], phi: [[[0.5, 0.1], [0, 0]], [[0.5], [0.1, 0]]], sd: 1}}",
+            "expected 2 rows of 2, one a component, got 2 rows of 1 or 2 in matrix 2 of 2; give",
+        ),
+        (
+            "{vector_arma: {names: [a, b], sd: [1, 2, 3]}}",
+            "expected 2 values, one a component, or one for all, got 3; give those of a, b in this order",
+        ),
+        (
+            "{vector_arma: {names: [a, b], sd: 1, correlation: [[1, 0.2]]}}",
+            "expected 2 rows of 2, one a component, got 1 row of 2; give a row and a column to each of a, b",
+        ),
+        (
+            "{vector_arma: {names: [a, b], sd: 1, correlation: [[1, 0.2], [0.3, 1]]}}",
+            "expected a symmetric matrix, got 0.3 in row 2, column 1 and 0.2 across it; make them equal",
+        ),
+        (
+            "{vector_arma: {names: [a, b], sd: 1, correlation: [[0.5, 0.2], [0.2, 1]]}}",
+            "expected 1 on the diagonal, got 0.5 in row 1; write 1 there",
+        ),
         (
             "{vector_arma: {names: [a, b], sd: 1, correlation: [[1, 1], [1, 1]]}}",
-            "expected a positive definite correlation, got the smallest eigenvalue",
+            "expected a positive definite correlation, got one whose smallest eigenvalue is",
         ),
         (
             "{vector_arma: {names: [a, b], phi: [[0.5, 0], [0, 0.5]], sd: 1, before: {x: [[1]]}}}",
-            "expected 1 or more rows of 2 past values in `x` (one a matrix of phi), got 1",
+            "expected 1 or more rows of 2 past values in `x` (a row a step, one for each lag of phi), got 1 row of 1; "
+            "give those of a, b in each row, the last step last",
         ),
         (
             "{vector_error_correction: {names: [a, b], relations: [[1, -1]], adjustment: [[0.2], [-0.1]], sd: 1}}",
@@ -179,9 +204,17 @@ def test_an_appended_component_moves_nobody():
             "sd: 1}}",
             "expected fewer relations than the 2 components: with 2 of them nothing wanders; use vector_arma",
         ),
+        (
+            "{vector_error_correction: {names: [a, b], relations: [[1]], adjustment: [[-1]], sd: 1}}",
+            "expected a row of 2 weights for each relation, one a component, got 1 row of 1; give the weights of a, b",
+        ),
+        (
+            "{vector_error_correction: {names: [a, b], relations: [[1, -1]], adjustment: [[-1, 0]], sd: 1}}",
+            "expected 2 rows of 1 (a row a component, a column a relation), got 1 row of 2; give a row to each of a, b",
+        ),
     ],
 )
-def test_refusals_say_what_was_expected(body, message):
+def test_refusals_say_what_was_expected_and_given(body, message):
     with pytest.raises(SpecError) as error:
         system(body)
     assert message in str(error.value)
@@ -191,3 +224,22 @@ def test_a_component_that_does_not_exist_is_named():
     with pytest.raises(SpecError) as error:
         graph_of("  x: {use: w.v.d}", rest=f"shared:\n  w: [{{{TWO[1:-1]}, as: v}}]")
     assert "there is no hidden output of w.v named d; expected a or b" in str(error.value)
+
+
+def test_shocks_have_a_letter_that_no_component_can_have():
+    """Lütkepohl (2005) writes u for them; here a component may be called u, or a_b, but no Greek letter."""
+    body = "{vector_arma: {names: [a, a_a], phi: [[0.5, 0.2], [0, 0.4]], theta: [[0, 0.3], [0, 0]], sd: [1, 2]}}"
+    graph, _, _ = system(body)
+    lines = " ".join(" ".join(equations(graph.spec, 200)).split())
+    assert "a[t] = 0.5 a[t−1] + 0.2 a_a[t−1] + 0.3 ε_a_a[t−1] + ε_a[t], a_a[t] = 0.4 a_a[t−1] + ε_a_a[t]" in lines
+    assert "sd ε = (1, 2), independent" in lines
+
+
+def test_equations_say_where_a_system_leaves_from():
+    known = "before: {x: [[3, 4], [5, 6]], shocks: [[1, 2]]}"
+    past = f"{{vector_arma: {{names: [a, b], theta: [[1, 0], [0, 1]], sd: 1, {known}}}}}"
+    lines = " ".join(" ".join(equations(system(past)[0].spec, 200)).split())
+    assert "a[−2] = 3, a[−1] = 5, b[−2] = 4, b[−1] = 6, ε_a[−1] = 1, ε_b[−1] = 2" in lines
+    pull = "relations: [[1, -1]], adjustment: [[-0.2], [0.1]]"
+    start = f"{{vector_error_correction: {{names: [a, b], {pull}, start: 7, sd: 1}}}}"
+    assert "a[0] = 7, b[0] = 7" in " ".join(equations(system(start)[0].spec, 200))
