@@ -281,6 +281,11 @@ def signed(x: float, what: str) -> str:
     return f"{'−' if x < 0 else '+'} {size}{' ' if size and what else ''}{what}"
 
 
+def steps_long(x: float) -> str:
+    """`1 step` or `4 steps`, in a sentence."""
+    return f"{number(x)} step{'' if x == 1 else 's'}"
+
+
 def steps_since(x: float) -> str:
     """`t`, `(t − 5)` or `(t + 5)`: the steps since x, in an equation."""
     return f"(t {signed(-x, '')})" if x else "t"

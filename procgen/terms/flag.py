@@ -7,7 +7,7 @@ import numpy as np
 from procgen.chance.kernel import kernel
 from procgen.chance.laws import LAWS
 from procgen.spec.declare import Moment, Parameter, Real, Records, Span
-from procgen.terms.base import Ahead, Draw, Term, number
+from procgen.terms.base import Ahead, Draw, Term, number, steps_long
 from procgen.terms.support import BINARY
 
 UNIFORM = LAWS["uniform"]()
@@ -63,8 +63,9 @@ class Flag(Term):
             if values["stay"] < least:
                 yield (
                     "stay",
-                    f"expected a stay of at least {number(least)} steps for a share of {number(values['share'])}, got "
-                    f"{number(values['stay'])}: it could not come back soon enough; raise stay, or lower share",
+                    f"expected a stay of at least {steps_long(least)} for a share of {number(values['share'])}, got "
+                    f"{number(values['stay'])}: {too_short(least, 'it would be off for less than one')}; raise stay"
+                    + (", or lower share" if least > 1.0 else ""),
                 )
         for span in values["spans"]:
             if span["until"] is not None and span["until"] <= span["from"]:
@@ -162,6 +163,11 @@ class Flag(Term):
             return f"x[t] = 1 for {' or '.join(f'{begin} ≤ t{end}' for begin, end in ends)}, else 0"
         enter, stay = self.chances
         return f"P(x[t] = 1) = {number(stay)} after a 1, {number(enter)} after a 0"
+
+
+def too_short(least, between):
+    """Why no mean can be below `least` steps; `between` says what is wrong where what lies between is too short."""
+    return "none lasts less than a step" if least == 1.0 else between
 
 
 def runs(on, state, enter, stay, apart):

@@ -5,9 +5,9 @@ from __future__ import annotations
 import numpy as np
 
 from procgen.spec.declare import Parameter, Real, Span
-from procgen.terms.base import Ahead, Draw, Term, number
+from procgen.terms.base import Ahead, Draw, Term, number, steps_long
 from procgen.terms.combine import OF
-from procgen.terms.flag import UNIFORM, Flag, runs
+from procgen.terms.flag import UNIFORM, Flag, runs, too_short
 from procgen.terms.support import BINARY, EVERYTHING
 
 
@@ -45,8 +45,9 @@ class Missing(Term):
             least = max(1.0, share / (1.0 - share))
             yield (
                 "gap",
-                f"expected gaps of at least {number(least)} steps for a share of {number(share)}, got "
-                f"{number(values['gap'])}: the next one could not come soon enough; raise gap, or lower share",
+                f"expected gaps of at least {steps_long(least)} for a share of {number(share)}, got "
+                f"{number(values['gap'])}: {too_short(least, 'they would be less than one apart')}; raise gap"
+                + (", or lower share" if least > 1.0 else ""),
             )
 
     def draws(self):

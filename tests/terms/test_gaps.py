@@ -92,8 +92,15 @@ def test_one_nan_in_digests_whatever_its_bits():
 @pytest.mark.parametrize(
     "wrong, says",
     [
-        (spec(0.8, 2), "expected gaps of at least 4 steps for a share of 0.8, got 2"),
-        (spec(0.2, 0.5), "expected gaps of at least 1 steps for a share of 0.2, got 0.5"),
+        (
+            spec(0.8, 2),
+            "expected gaps of at least 4 steps for a share of 0.8, got 2: they would be less than one apart; raise "
+            "gap, or lower share",
+        ),
+        (
+            spec(0.2, 0.5),
+            "expected gaps of at least 1 step for a share of 0.2, got 0.5: none lasts less than a step; raise gap",
+        ),
         (spec(type="int64"), "an int64 cannot say that a value of x is missing; write decimals: 0"),
         (
             HEAD | {"series": {"x": [*spec()["series"]["x"], {"constant": 1, "as": "c"}]}},

@@ -216,7 +216,15 @@ def test_flag_agrees_with_its_theory_and_another_does_not():
 @pytest.mark.parametrize(
     ("term", "sentence"),
     [
-        ("{flag: {share: 0.9, stay: 3}}", "expected a stay of at least 9 steps for a share of 0.9, got 3"),
+        (
+            "{flag: {share: 0.9, stay: 3}}",
+            "expected a stay of at least 9 steps for a share of 0.9, got 3: it would be off for less than one; "
+            "raise stay, or lower share",
+        ),
+        (
+            "{intermittent: {share: 0.2, stay: 0.5, size: 3, sd: 1}}",
+            "expected a stay of at least 1 step for a share of 0.2, got 0.5: none lasts less than a step; raise stay",
+        ),
         ("{flag: {stay: 3}}", "expected `share` or `spans`, exactly one of them"),
         ("{flag: {spans: [{from: 5, until: 5}]}}", "expected spans that end after they begin"),
         ("{event: {shape: ramp, at: 3, size: 1}}", "expected a length beside shape: ramp; give length"),
