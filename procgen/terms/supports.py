@@ -14,31 +14,50 @@ from procgen.terms.shape import Logit
 from procgen.terms.support import EVERYTHING, Support
 
 LARGEST_EXPONENT = 709.0
+BOUNDED = ("uniform", "bernoulli", "empirical")  # laws whose shocks end somewhere
 LARGEST = 2.0**53  # up to here every whole number is a float64
 
 
 def refuse_outside(graph: Any) -> None:
-    """SpecError when a logit gets only what is not between its levels, or a value is beyond double precision."""
+    """SpecError when nothing holds the body of a logit between its levels, or a value is beyond double precision."""
     if graph.varied is not None and graph.varied.parameters:
         return
     for node in graph.order(graph.owned()):
         if not isinstance(node, Node):
             continue
-        if isinstance(node.term, Logit):
-            body, low, high = support_of(node.inputs[0]), float(node.term.low), float(node.term.high)
-            if body.low >= high or body.high <= low:
-                got = number(body.low) if body.low == body.high else f"what is never below {number(body.low)}"
-                if body.high <= low and body.low != body.high:
-                    got = f"what is never above {number(body.high)}"
-                levels = f"{number(low)} and {number(high)}"
-                message = f"{node.name} needs a body between its levels {levels}, got {got}; move `low` or `high`"
-                raise SpecError((Fault(node.place, message),))
+        if isinstance(node.term, Logit) and (fault := _beyond_levels(graph, node)):
+            raise SpecError((Fault(node.place, f"{node.name} needs a body between its levels {fault}"),))
         if isinstance(node.term, Exp) and (lowest := support_of(node.inputs[0]).low) > LARGEST_EXPONENT:
             message = (
                 f"{node.name} needs a body below {number(LARGEST_EXPONENT)}, whose exponential a float64 can hold, got "
                 f"{number(lowest)} or more; subtract a level from it"
             )
             raise SpecError((Fault(node.place, message),))
+
+
+def _beyond_levels(graph: Any, node: Node) -> str:
+    """What is wrong with the body of a logit: a value of it, or a side of it, is not between the levels; or ""."""
+    body, low, high = support_of(node.inputs[0]), float(node.term.low), float(node.term.high)
+    levels = f"{number(low)} and {number(high)}"
+    if body.low == body.high and not low < body.low < high:
+        return f"{levels}, got {number(body.low)}; move `low` or `high`"
+    if body.low >= high or body.high <= low:
+        never = f"never below {number(body.low)}" if body.low >= high else f"never above {number(body.high)}"
+        return f"{levels}, got what is {never}; move `low` or `high`"
+    values = body.values or [level for level in (low, high) if body.on(level) and body.low <= level <= body.high]
+    outside = [x for x in values if not low < x < high]
+    if outside:
+        return f"{levels}, got what can be {number(outside[0])}; move `low` or `high`"
+    if (body.low < low or body.high > high) and _unbounded(graph, node):
+        held = "hold it by a sigmoid, or by a clip whose bounds are a little within the levels"
+        return f"{levels}, got one that nothing holds there; {held}"
+    return ""
+
+
+def _unbounded(graph: Any, node: Node) -> bool:
+    """Whether a shock of some size at all is drawn for a node."""
+    laws = [part.law for part in graph.order([node]) if not isinstance(part, Node)]
+    return any(law.name not in BOUNDED or getattr(law, "smoothed", False) for law in laws)
 
 
 def column_type(graph: Any, name: str) -> str:

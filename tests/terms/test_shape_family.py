@@ -152,9 +152,11 @@ def test_what_cannot_be_is_refused_with_the_mend(term, sentence):
 
 
 def test_a_logit_beyond_its_levels_is_no_number():
-    graph = graph_of("  x: {logit: [{white_noise: {sd: 1}}]}")
-    x = draw(graph, 0, 50, [20])["x"]
-    assert np.isnan(x).any() and np.isfinite(x).any()
+    """Known values are looked at when they are drawn, and so are those of shocks that end somewhere."""
+    graph = graph_of("  x: {logit: [{white_noise: {sd: 1, law: uniform}}]}\n  y: {logit: [{trend: {slope: 0.1}}]}")
+    x = draw(graph, 0, 50, [20])
+    for values in x.values():
+        assert np.isnan(values).any() and np.isfinite(values).any()
 
 
 def test_a_season_shorter_than_two_steps_is_refused():
@@ -175,10 +177,14 @@ def test_a_season_shorter_than_two_steps_is_refused():
     [
         ("logit: [{constant: 1}]", "x.logit needs a body between its levels 0 and 1, got 1"),
         ("logit: {of: [{poisson: {mean: 3}}, {constant: 2}], high: 2}", "levels 0 and 2, got what is never below 2"),
+        ("logit: [{flag: {share: 0.3}}]", "levels 0 and 1, got what can be 0; move"),
+        ("logit: {of: [{poisson: {mean: 3}}], low: -1, high: 9}", "levels −1 and 9, got what can be 9; move"),
+        ("logit: [{ar: {phi: 0.5, sd: 1}}]", "got one that nothing holds there; hold it by a sigmoid, or by a clip"),
+        ("logit: [{white_noise: {sd: 0.1, law: {empirical: {values: [1, 2], smoothed: true}}}}]", "nothing holds"),
         ("exp: [{constant: 800}]", "x.exp needs a body below 709"),
     ],
 )
-def test_what_no_value_can_come_of_is_refused_before_it_is_drawn(body, says):
-    """The log odds of 1 are infinite (Berkson 1944), and so is exp(800) in double precision (IEEE 754)."""
+def test_a_body_that_can_have_no_log_odds_or_exponential_is_refused_before_it_is_drawn(body, says):
+    """The log odds of 0 and 1 are infinite (Berkson 1944), and so is exp(800) in double precision (IEEE 754)."""
     with pytest.raises(SpecError, match=re.escape(says)):
         graph_of(f"  x: {{{body}}}")
