@@ -115,7 +115,8 @@ def test_a_composition_without_a_label_goes_by_its_kind():
          "w has 2 terms of kind exp: write as: some_name beside the one that is meant, and name w.some_name"),
         ("{ar: {phi: 0.1, shock: {garch: {sd: 1, alpha: 0.1}}}}", "w.garch.variance",
          "a shock goes by the name of the term that it drives: expected w.ar.variance, got w.garch.variance"),
-        ("{exp: {constant: 1}}", "w.epx", "there is no term of w named epx; expected constant or exp; did you mean exp?"),
+        ("{exp: {constant: 1}}", "w.epx", "there is no term of w named epx; expected constant or exp; did you mean "
+         "exp?"),
         ("[{exp: {constant: 1}}, {use: z, as: u}]", "w.use", "there is no term of w named use; expected one of "
          "constant, u, exp"),
     ],
