@@ -72,7 +72,7 @@ def test_anderson_darling_limits(a2, p):
 @pytest.mark.parametrize(("k", "p"), [(1.22384787, 0.10), (1.35809864, 0.05), (1.62762361, 0.01)])
 def test_kolmogorov_limits(k, p):
     # REFERENCES 12.5: Miller (1956); Stephens (1974).
-    n = 10**9
+    n = 10**15
     assert math.exp(tails.kolmogorov(k / math.sqrt(n), n)) == pytest.approx(p, rel=1e-6)
 
 
@@ -80,6 +80,15 @@ def test_kolmogorov_limits(k, p):
 def test_kolmogorov_small_samples(n, d, p):
     # REFERENCES 12.5, Miller's table to five digits.
     assert math.exp(tails.kolmogorov(d, n)) == pytest.approx(p, rel=2e-4)
+
+
+@pytest.mark.parametrize("n", [3, 8, 50, 1_000, 9_999, 10_001, 60_000])
+def test_kolmogorov_against_the_exact_law(n):
+    for x, rel in ((0.5, 1e-2), (0.8, 1e-2), (1.3, 2e-4), (1.6, 2e-4), (2.0, 1e-3), (2.6, 2e-3)):
+        distance = x / math.sqrt(n)
+        if distance < 1.0:
+            exact = stats.kstwo.sf(distance, n)  # SciPy, after Simard & L'Ecuyer (2011)
+            assert math.exp(tails.kolmogorov(distance, n)) == pytest.approx(exact, rel=rel)
 
 
 def test_anderson_darling_statistic_against_scipy():
