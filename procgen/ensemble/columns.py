@@ -50,8 +50,10 @@ def as_kept(columns: Iterable[Column], types: Mapping[str, str]) -> list[Column]
     ]
 
 
-def store(values: np.ndarray, column: Column) -> np.ndarray:
+def store(values: np.ndarray, column: Column, spare: bool = False) -> np.ndarray:
     """Drawn values (paths, steps) as they are stored; a new array, or the same when nothing changes.
+
+    `spare` says that nobody needs the drawn values: what is stored may then take their memory.
 
     With d decimals, rint(x·10^d)/10^d: the product is rounded to the nearest whole number, an exact half to
     the even one, and the quotient is the double nearest to that decimal number. `int64` is rint; `float32`
@@ -65,7 +67,7 @@ def store(values: np.ndarray, column: Column) -> np.ndarray:
     kept = values if column.decimals is None else _rounded(values, column.decimals)
     if column.type == "int64":
         if column.counted:
-            return _as_whole(kept, column)
+            return _as_whole(kept, column, kept if spare else np.empty(kept.shape))
         kept = np.rint(kept)
         _refuse(np.abs(kept) >= 2.0**63, kept, column)
         return kept.astype(np.int64)
@@ -90,23 +92,25 @@ def _rounded(values: np.ndarray, decimals: int) -> np.ndarray:
     return scaled
 
 
-def _as_whole(values: np.ndarray, column: Column) -> np.ndarray:
-    """Whole numbers as int64; EnsembleError unless int64 and float64 both have all of them.
+def _as_whole(values: np.ndarray, column: Column, memory: np.ndarray) -> np.ndarray:
+    """Whole numbers as int64, in `memory`, which may be theirs.
 
-    A few paths at a time, so that what is compared stays in the processor's cache.
+    EnsembleError unless int64 and float64 both have all of them. A few paths at a time, so that what is compared
+    stays in the processor's cache.
     """
-    whole = np.empty(values.shape, np.int64)
+    whole = memory.view(np.int64)
     paths = max(AT_ONCE // max(values.shape[-1], 1), 1)
     for first in range(0, len(values), paths):
-        given, found = values[first : first + paths], whole[first : first + paths]
+        given = values[first : first + paths]
         with np.errstate(invalid="ignore"):
-            np.copyto(found, given, casting="unsafe")
+            found = given.astype(np.int64)
         if not (given.size == 0 or (np.abs(given).max() <= WHOLE and (found == given).all())):
             bad = given[(np.abs(given) > WHOLE) | (np.rint(given) != given)]
             raise EnsembleError(
                 f"series {column.name} is stored as int64, as whole numbers are, and the value {float(bad[0])!r} "
                 "is not a whole number of at most 2^53 in size; write type: float64 for it in the spec"
             )
+        whole[first : first + paths] = found
     return whole
 
 

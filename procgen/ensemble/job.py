@@ -174,7 +174,7 @@ def _in_memory(source: Source, whole: Block, progress: Progress | None) -> Memor
         drawer.fill(batch, {name: data[rows, span] for name, data in values.items()})
         if batch.end_step == whole.end_step:
             drawer.forget(batch)
-    stored = {column.name: store(values.pop(column.name), column) for column in source.columns}
+    stored = {column.name: store(values.pop(column.name), column, spare=True) for column in source.columns}
     return Memory(stored, source.columns, whole, source.stamps, source)
 
 

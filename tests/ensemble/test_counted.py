@@ -141,6 +141,10 @@ def test_whole_numbers_that_float64_does_not_have_are_refused_with_the_mend():
 def test_a_value_that_is_not_whole_is_never_rounded_away():
     kept = store(np.array([[2.0**53, -3.0, -0.0]]), Column("n", "int64", counted=True))
     assert kept.dtype == np.int64 and kept.tolist() == [[2**53, -3, 0]]
+    drawn = np.arange(60_000.0).reshape(300, 200)
+    spare = store(drawn.copy(), Column("n", "int64", counted=True), spare=True)
+    assert spare.dtype == np.int64 and np.array_equal(spare, drawn)
+    assert store(drawn, Column("n", "int64", counted=True))[0, 1] == 1 and drawn[0, 1] == 1.0
     for wrong in (2.5, 2.0**53 + 2, 1e300, np.nan):
         with pytest.raises(EnsembleError, match="type: float64"):
             store(np.array([[1.0, wrong]]), Column("n", "int64", counted=True))
