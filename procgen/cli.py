@@ -24,6 +24,7 @@ from procgen.options import (
     refuse_any,
     share,
     steps_of,
+    told_unnamed,
     whole,
     within,
 )
@@ -159,6 +160,7 @@ def render(
     form: dict[str, Any] = {"layout": layout, "columns": columns, "partition": partition, "reveal": reveal}
     if not overwrite:
         refuse_any(specs, out, resume=resume, **size, **form)
+    told_unnamed(reveal, specs)
     for name, loaded in specs.items():
         folder = within(out, name)
         with progress(f"drawing {name}".strip()) as tick, named(name):

@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
-from procgen.console import printed, progress
+from procgen.console import printed, progress, said
 
 if TYPE_CHECKING:
     from procgen.ensemble.expected import Expected
@@ -142,6 +142,19 @@ def refuse_any(specs: Mapping[str, Spec], out: str, **options: Any) -> None:
             faults.append(str(error))
     if faults:
         raise EnsembleError("\n".join(["nothing is drawn, for not all variants can be:", *faults]))
+
+
+def told_unnamed(reveal: str | None, specs: Mapping[str, Spec]) -> None:
+    """Say of which series not all can be revealed, where all is asked for."""
+    from procgen.ensemble.source import unnamed
+
+    if reveal == "all":
+        owners = dict.fromkeys(name for spec in specs.values() for name in unnamed(spec))
+        if owners:
+            said(
+                f"not all terms of {', '.join(owners)} are revealed: several of one kind have no label; write as: "
+                "some_name beside each"
+            )
 
 
 @contextmanager

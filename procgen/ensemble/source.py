@@ -121,7 +121,7 @@ def remember(spec: Any, reveal: tuple[str, ...]) -> Source:
 
 
 def revealable(spec: Any) -> tuple[str, ...]:
-    """Every `series.label` and `series.label.output` of a spec, in its order."""
+    """Every `series.label` and `series.label.output` of a spec, in its order; what has no name alone is left out."""
     from procgen.terms.graph import build
 
     names: dict[str, None] = {}
@@ -129,3 +129,12 @@ def revealable(spec: Any) -> tuple[str, ...]:
         names[name] = None
         names.update({f"{name}.{output}": None for output in node.term.outputs})
     return tuple(names)
+        if name.endswith("."):
+            continue
+
+
+def unnamed(spec: Any) -> tuple[str, ...]:
+    """The series and shared bodies of which `revealable` has to leave some terms out."""
+    from procgen.terms.graph import build
+
+    return tuple(dict.fromkeys(name[:-1] for name, _ in build(spec).terms() if name.endswith(".")))

@@ -17,6 +17,7 @@ from procgen.spec.model import Entry, Fault, Place, Spec, SpecError
 from procgen.terms import catalogue
 from procgen.terms.base import Node, Term
 from procgen.terms.combine import Hidden, Scaled, Sum
+from procgen.terms.labels import entry_named, labelled
 from procgen.terms.misfits import gaps_of, refuse_gaps, refuse_uneven
 from procgen.terms.mixing import Group, followed, groups_of
 from procgen.terms.noise import WhiteNoise
@@ -111,16 +112,19 @@ class Graph:
         return list(done.values())
 
     def terms(self) -> Iterator[tuple[str, Node]]:
-        """Every labelled term of every series and shared body, as (`series.label`, node), in spec order."""
+        """Every term of every series and shared body, as (`series.label`, node), in spec order.
+
+        The label is "" where several terms would share it, which no name then points to.
+        """
         owners: dict[str, Any] = {**self.spec.shared, **self.spec.series}
         for owner, body in owners.items():
-            for entry in _walk(body.of):
+            for label, entry in labelled(body.of):
                 node = self._entry(entry, owner)
                 while isinstance(node.term, Scaled):
                     node = node.inputs[0]
                 if node.pace > 1:
                     continue
-                yield f"{owner}.{entry.label or entry.kind}", node
+                yield f"{owner}.{label}", node
 
     def owned(self) -> list[Node]:
         """The nodes of every series and shared body."""
@@ -230,12 +234,7 @@ class Graph:
 
     def _entry_named(self, owner: str, label: str, name: str) -> Entry:
         body = self.spec.series.get(owner) or self.spec.shared[owner]
-        labels: dict[str, Entry] = {}
-        for entry in _walk(body.of):
-            labels.setdefault(entry.label or entry.kind, entry)
-        if label not in labels:
-            raise KeyError(f"expected one of {', '.join(labels)} in {owner}, got {label!r} in {name!r}")
-        return labels[label]
+        return entry_named(body.of, owner, label, name)
 
     def _hidden_of(self, node: Node, output: str, name: str) -> Node:
         while output not in node.term.outputs and node.term.takes_shock:
@@ -373,12 +372,3 @@ def _paced(entries: tuple[Entry, ...], pace: int) -> Iterator[tuple[int, int]]:
             yield from _paced((entry.shock,), pace)
         for body in entry.bodies.values():
             yield from _paced(body, within)
-
-
-def _walk(entries: tuple[Entry, ...]) -> Iterator[Entry]:
-    for entry in entries:
-        yield entry
-        if entry.shock is not None:
-            yield from _walk((entry.shock,))
-        for body in entry.bodies.values():
-            yield from _walk(body)

@@ -1,12 +1,20 @@
 """Tables of what was drawn beside the values: they follow from the spec, and stand in a folder of their own."""
 
 import shutil
+from pathlib import Path
 
 import numpy as np
 import pandas as pd
 import pytest
+import yaml
+from typer.testing import CliRunner
 
 import procgen as pg
+from procgen.cli import app
+from procgen.ensemble.columns import store
+from procgen.terms.labels import labelled
+
+ROOT = Path(__file__).parents[2]
 
 
 def path(law):
@@ -97,3 +105,61 @@ def test_a_spec_without_any_has_no_tables(tmp_path):
     ensemble = pg.render(raw, out=tmp_path / "out")
     assert not (tmp_path / "out" / "tables").exists()
     assert ensemble.parameters.shape == (3, 0) and list(ensemble.series.index) == ["x"]
+
+
+# components
+
+
+def parts_of(spec, name):
+    """The columns that a series is the sum of, in order."""
+    here = [f"{name}.{label}" for label, entry in labelled(spec.series[name].of) if entry in spec.series[name].of]
+    return here + [f"{name}.open_start"] * bool(spec.series[name].before)
+
+
+@pytest.mark.parametrize("file", ["cold-store", "sensor-drift", "bakery-sales", "reservoir-fan", "machine-vibration"])
+def test_components_add_up_to_the_series_exactly_as_stored(file):
+    """In the order of the spec, then rounded as the series is (decimals, int64, float32); no outside source needed."""
+    spec = pg.load(ROOT / "specs" / f"{file}.yaml").changed(paths=5, steps=40)
+    ens = pg.render(spec, reveal="all")
+    some = 0
+    for column in (column for column in ens.columns if not column.revealed):
+        first, *others = [ens[part] for part in parts_of(spec, column.name) if part in ens]
+        assert len(others) + 1 == len(spec.series[column.name].of) + (f"{column.name}.open_start" in ens)
+        some += len(others)
+        total = sum(others, start=first)
+        assert np.array_equal(store(total, column), ens[column.name], equal_nan=True)
+    assert some
+
+
+SEVERAL = {
+    "seed": 3,
+    "paths": 4,
+    "time": {"steps": 10},
+    "shared": {"wind": [{"ar": {"phi": 0.5, "sd": 1}}], "sun": [{"ar": {"phi": 0.3, "sd": 1}}]},
+    "series": {
+        "a": [{"use": "wind"}, {"use": "sun", "times": 2}, {"constant": 3}],
+        "b": [{"use": "wind"}, {"use": "wind", "times": 2}, {"product": [{"use": "a"}, {"use": "sun.ar"}]}],
+        "c": [{"use": "a"}],
+    },
+}
+
+
+def test_several_uses_in_a_series_go_by_what_they_use():
+    ens = pg.render(SEVERAL, reveal="all")
+    assert [name for name in ens if name[:2] in ("a.", "c.")] == ["a.use_wind", "a.use_sun", "a.constant", "c.use"]
+    assert np.array_equal(ens["a.use_sun"], 2 * ens["sun.ar"]) and np.array_equal(ens["a.use_wind"], ens["wind.ar"])
+    assert np.array_equal(ens["a.use_wind"] + ens["a.use_sun"] + ens["a.constant"], ens["a"])
+    assert [name for name in ens if name.startswith("b.")] == ["b.product", "b.use_a", "b.use_sun_ar"]
+    assert pg.render(SEVERAL, reveal=["a.use_sun"]).names == ("a", "b", "c", "a.use_sun")
+
+
+def test_a_name_that_several_terms_would_share_is_refused(tmp_path):
+    said = "b has 4 terms of kind use (b.use_a, b.use_sun_ar): write as: some_name beside the one that is meant"
+    for name in ("b.use", "b.use_wind"):
+        with pytest.raises(pg.EnsembleError) as error:
+            pg.render(SEVERAL, reveal=name)
+        assert ("cannot reveal: " + said if name == "b.use" else "cannot reveal: expected one of") in str(error.value)
+    file = tmp_path / "several.yaml"
+    file.write_text(yaml.safe_dump({"procgen": 1, **SEVERAL}))
+    done = CliRunner().invoke(app, ["render", str(file), "-o", str(tmp_path / "out"), "--reveal", "all"])
+    assert done.exit_code == 0 and "not all terms of b are revealed: several of one kind have no label" in done.stderr
