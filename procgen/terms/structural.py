@@ -11,6 +11,7 @@ from typing import ClassVar
 
 import numpy as np
 
+from procgen.chance.kernel import is_compiling, kernel
 from procgen.chance.laws import Normal
 from procgen.spec.declare import REQUIRED, Choice, Parameter, Real, Reals, Record, Span
 from procgen.terms.arima import LONGEST, SHOCK_SD, Integrated, filled
@@ -19,6 +20,19 @@ from procgen.terms.base import LAW, Ahead, Draw, Term, number
 from procgen.terms.walk import accumulate
 
 NORMAL = Normal()
+WIDE = 256  # paths from which a row at a time is quicker than a tile at a time
+
+
+@kernel
+def drifted(a, b, noise, level_sd, slope_sd, noise_sd, level, slope, x, levels, slopes):
+    """Value, level and slope from the level and slope before them; returns the last of both."""
+    for t in range(x.shape[0]):
+        level = level + (slope + level_sd * a[t])
+        slope = slope + slope_sd * b[t]
+        x[t] = level + noise_sd * noise[t]
+        levels[t] = level
+        slopes[t] = slope
+    return level, slope
 
 
 def spread(name, symbol, of, default=0.0, per=None, no_per=None):
@@ -157,6 +171,25 @@ class LocalLinearTrend(LocalLevel):
         return {"": level + part["noise"], "level": level, "slope": slope}
 
     def recurse(self, inputs, state, at):
+        if inputs[0].shape[1] < WIDE and not is_compiling():
+            return self._summed(inputs, state)
+        spreads, left = self.disturbances(), list(inputs)
+        a, b, noise = (left.pop(0) if sd else np.zeros((len(inputs[0]), 1)) for sd in spreads.values())
+        x, levels, slopes = (np.empty_like(inputs[0]) for _ in range(3))
+        first = 0 if state else 1  # step 0 is the start
+        if state:
+            level, slope = (state[name][0] + np.zeros(x.shape[1]) for name in ("level", "slope"))
+        else:
+            level, slope = (np.zeros(x.shape[1]) + start for start in (self.start, self.slope))
+            levels[0], slopes[0], x[0] = level, slope, level + self.noise_sd * noise[0]
+        level, slope = drifted(
+            a[first:], b[first:], noise[first:], *spreads.values(), level, slope, x[first:], levels[first:],
+            slopes[first:],
+        )  # fmt: skip
+        return {"": x, "level": levels, "slope": slopes}, {"level": level[None, :], "slope": slope[None, :]}
+
+    def _summed(self, inputs, state):
+        """`recurse` by one sum after the other, which takes less of the interpreter for a few paths."""
         part = self.scaled(inputs)
         slope, last_slope = _walked(part["slope"], state.get("slope"), self.slope, inputs[0])
         before = state["slope"] if "slope" in state else np.zeros((1, 1))  # not used: step 0 is the start
