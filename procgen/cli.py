@@ -240,7 +240,7 @@ def validate(
     with progress("reading") as tick:
         verdict = pg.validate(data, stated, false_alarm, columns or None, tick, workers, scheduler)
     written = None if report is None else f"report: {verdict.to_html(report, overwrite)}"
-    printed(verdict_json(verdict) if json else verdict.to_text())
+    printed(verdict_json(verdict) if json else verdict.to_text(), json)
     if written:
         said(written) if json else printed(f"\n{written}")
     raise typer.Exit({True: 0, False: 1, None: 2}[verdict.agrees])
@@ -318,7 +318,7 @@ def theory(
     from procgen.report.theory import theory_json, theory_text
 
     loaded = one_asked(spec, variant, setting, start)
-    printed((theory_json if json else theory_text)(loaded, pg.theory(loaded), at, lags, frequencies, horizon))
+    printed((theory_json if json else theory_text)(loaded, pg.theory(loaded), at, lags, frequencies, horizon), json)
 
 
 @app.command(
@@ -351,7 +351,7 @@ def schema() -> None:
 
     from procgen.report.schema import schema as spec_schema
 
-    printed(dumps(spec_schema(), indent=1, ensure_ascii=False))
+    printed(dumps(spec_schema(), indent=1, ensure_ascii=False), json=True)
 
 
 @app.command(

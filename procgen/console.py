@@ -50,13 +50,13 @@ def run(app: typer.Typer) -> NoReturn:
     sys.exit(0)
 
 
-def printed(text: str) -> None:
-    """Write text to standard output, whatever letters the terminal can show."""
-    from procgen.report.letters import encoded
+def printed(text: str, json: bool = False) -> None:
+    """Write text to standard output, whatever letters the terminal can show; what it would obey is written as codes."""
+    from procgen.report.letters import encoded, tame
 
     stream = sys.stdout
     encoding = getattr(stream, "encoding", None) or "utf-8"
-    stream.write(encoded(text, encoding).decode(encoding))
+    stream.write(encoded(tame(text, json), encoding).decode(encoding))
     if not text.endswith("\n"):
         stream.write("\n")
 
@@ -113,5 +113,7 @@ def sentence(error: Exception) -> str:
 
 
 def said(text: str) -> None:
-    """Write a line to standard error, beside what is printed."""
-    print(f"procgen: {text}", file=sys.stderr)
+    """Write a line to standard error, beside what is printed; what a terminal would obey is written as codes."""
+    from procgen.report.letters import tame
+
+    print(f"procgen: {tame(text)}", file=sys.stderr)

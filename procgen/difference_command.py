@@ -42,5 +42,5 @@ def difference(
     first: Any = a if variant is None else pg.load(a)
     with progress("comparing") as tick:
         found = pg.difference(first, b if variant is None else first.variant(variant), at, tick)
-    printed(found.to_json() if json else found.text())
+    printed(found.to_json() if json else found.text(), json)
     raise typer.Exit(0 if found.equal else 1)

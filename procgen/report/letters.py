@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import codecs
+import re
 import unicodedata
 
 PLAIN = {
@@ -17,6 +18,14 @@ PLAIN = {
     **{"×": "x", "·": "*", "…": "...", "≤": "<=", "≥": ">=", "≈": "~", "→": "->", "√": "sqrt ", "∈": "in", "∞": "inf"},
     **{"Σ": "sum ", "±": "+-", "∂": "d", "⌊": "floor(", "⌋": ")"},
 }
+
+# What a terminal obeys or turns round: all controls but tab and line feed, odd line ends, marks of direction.
+_OBEYED = re.compile("[\x00-\x08\x0b-\x1f\x7f-\x9f\u061c\u200e\u200f\u2028-\u202e\u2066-\u2069\ud800-\udfff]")
+
+
+def tame(text: str, json: bool = False) -> str:
+    """The text with letters that a terminal obeys written as their code; in JSON as an escape of the same value."""
+    return _OBEYED.sub(lambda match: f"\\u{ord(match[0]):04x}" if json else f"‹U+{ord(match[0]):04X}›", text)
 
 
 def encoded(text: str, encoding: str) -> bytes:
