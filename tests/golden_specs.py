@@ -8,7 +8,9 @@ from __future__ import annotations
 
 import json
 import sys
+from collections.abc import Iterator
 from pathlib import Path
+from typing import Any
 
 import procgen as pg
 from procgen.chance.kernel import compiling
@@ -17,14 +19,19 @@ ROOT = Path(__file__).parent.parent
 FILE = ROOT / "tests" / "golden" / "specs.json"
 
 
+def small(paths: int = 40) -> Iterator[tuple[str, Any]]:
+    """Every gallery spec by name, with so many paths and at most 60 steps."""
+    for file in sorted((ROOT / "specs").glob("*.yaml")):
+        spec = pg.load(file).changed(paths=paths)
+        yield file.stem, spec.changed(steps=min(60, spec.time.steps))
+
+
 def digests(compiled: bool = False) -> dict[str, str]:
     """The ensemble digest of 40 paths and at most 60 steps of each gallery spec, by name."""
     found = {}
-    for file in sorted((ROOT / "specs").glob("*.yaml")):
-        spec = pg.load(file).changed(paths=40)
-        spec = spec.changed(steps=min(60, spec.time.steps))
+    for name, spec in small():
         with compiling(compiled):
-            found[file.stem] = pg.render(spec).digest
+            found[name] = pg.render(spec).digest
     return found
 
 

@@ -10,7 +10,7 @@ import sys
 import pytest
 
 from procgen.chance.kernel import available
-from tests.chance.test_golden import dispatched
+from tests.chance.golden import dispatched
 from tests.golden_specs import FILE, ROOT, digests
 
 GOLDEN = json.loads(FILE.read_text())

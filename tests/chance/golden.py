@@ -7,6 +7,7 @@ values that have never been released.
 import json
 import sys
 from hashlib import sha256
+from importlib import import_module
 from pathlib import Path
 
 import numpy as np
@@ -43,6 +44,13 @@ def recursion(z, out, h, omega, alpha, beta):
         out[t] = np.where(x > 0.5, x / 3.0, np.maximum(x, -2.0)) + e
         h = omega + alpha * (e * e) + beta * h
     return h
+
+
+def dispatched():
+    """The features above NumPy's baseline that it uses on this processor."""
+    core = "numpy._core" if int(np.__version__.split(".")[0]) >= 2 else "numpy.core"
+    numpy_build = import_module(f"{core}._multiarray_umath")
+    return [name for name in numpy_build.__cpu_dispatch__ if numpy_build.__cpu_features__.get(name)]
 
 
 def digest(values):

@@ -4,14 +4,12 @@ import json
 import os
 import subprocess
 import sys
-from importlib import import_module
 from pathlib import Path
 
-import numpy as np
 import pytest
 
 from procgen.chance.kernel import available
-from tests.chance.golden import FILE, digests
+from tests.chance.golden import FILE, digests, dispatched
 
 GOLDEN = json.loads(FILE.read_text())["digests"]
 ROOT = Path(__file__).parent.parent.parent
@@ -21,13 +19,6 @@ def test_digests():
     assert digests() == {name: GOLDEN[name] for name in GOLDEN if available() or "compiled" not in name}
     assert GOLDEN["kernel compiled"] == GOLDEN["kernel"]
     assert GOLDEN["uniforms compiled"] == GOLDEN["uniforms"]
-
-
-def dispatched():
-    """The features above NumPy's baseline that it uses on this processor."""
-    core = "numpy._core" if int(np.__version__.split(".")[0]) >= 2 else "numpy.core"
-    numpy_build = import_module(f"{core}._multiarray_umath")
-    return [name for name in numpy_build.__cpu_dispatch__ if numpy_build.__cpu_features__.get(name)]
 
 
 def digests_in_a_process(**environment):
