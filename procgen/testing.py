@@ -112,10 +112,13 @@ class Asked:
 
         store, root = _store(request), request.config.rootpath
         where = f"{request.fixturename} ({_shown(self.written[0], root)}, line {self.written[1]})"
+        found, fault = None, None
         try:
             found = self._drawn(store, root)
         except (SpecError, EnsembleError) as error:
-            pytest.fail(f"{where} cannot be drawn: {error}", pytrace=False)
+            fault = error
+        if found is None:  # outside of the handler, so that no traceback stands before the sentence
+            pytest.fail(f"{where} cannot be drawn: {fault}", pytrace=False)
         if self.expect is None:
             text = f'{where} has no digest to be held against; write expect="{found.digest}"'
             warnings.warn(pytest.PytestWarning(text), stacklevel=2)

@@ -190,6 +190,7 @@ def test_faults_of_a_spec_are_told_without_a_traceback(project):
     project.spec("phi: 0.6", "phi: 1.6")
     said = project.run(errors=2)
     assert "dairy (test_dairy.py, line 3) cannot be drawn: expected all roots" in said
+    assert "During handling" not in said and "Traceback" not in said
     assert "Traceback" not in said and "procgen/testing.py" not in said
     (project.folder / "dairy.yaml").unlink()
     said = project.run(errors=2)
