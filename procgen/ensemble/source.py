@@ -126,11 +126,11 @@ def revealable(spec: Any) -> tuple[str, ...]:
 
     names: dict[str, None] = {}
     for name, node in build(spec).terms():
+        if name.endswith("."):
+            continue
         names[name] = None
         names.update({f"{name}.{output}": None for output in node.term.outputs})
     return tuple(names)
-        if name.endswith("."):
-            continue
 
 
 def unnamed(spec: Any) -> tuple[str, ...]:
