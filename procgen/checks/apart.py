@@ -10,13 +10,14 @@ smallest p has the law 1 − (1 − p)^N, which bounds it, too, where paths are 
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 
 import numpy as np
 from numpy.typing import NDArray
 
 from procgen.checks import judge, tails
 from procgen.checks.judge import Finding
+from procgen.checks.power import Z_POWER
 from procgen.checks.verdict import Check
 
 _EXACT_BELOW = 2_000  # shocks of a path whose products are judged by their exact law; of more they are normal
@@ -69,10 +70,16 @@ def checks(series: str, ends: Ends, sums: NDArray, pooled: dict[str, float]) -> 
             continue
         z, path, n = max(found, key=lambda one: abs(one[0]))
         log_p = judge.of_many(_memory(z, n) if what == "memory" else tails.normal(z), paths)
-        finding = Finding(0.0, z, 1.0, log_p, lambda level: judge.reach_of_worst(level, paths))
+        # A wider path has a wider law of its spread: on the cube root's scale (Wilson & Hilferty 1931) in proportion.
+        wider = 1.0 / (1.0 - Z_POWER * math.sqrt(2.0 / (9.0 * n))) if what == "spread" else 1.0
+        finding = Finding(0.0, z, 1.0, log_p, _reach(paths, wider))
         if what != "memory" and log_p > 2.0 * pooled[what]:  # not of one path alone
             kind = {"level": "memory", "spread": "clustering"}[what]
         yield Check.of(series, f"shocks: {what} by path", f"worst: path {path}", kind, finding)
+
+
+def _reach(paths: int, wider: float) -> Callable[[float], float]:
+    return lambda level: wider * judge.reach_of_worst(level, paths)
 
 
 def _memory(z: float, n: int) -> float:

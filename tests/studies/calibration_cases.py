@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.chance.laws import LAWS
-from procgen.checks import apart, farthest, judge, judge_shocks, untied
+from procgen.checks import apart, farthest, judge, judge_shocks, masks, untied
 from procgen.checks.judge import Finding, Sample
 from procgen.checks.scores import BINS, Scores, cluster_scores
 from procgen.checks.shocks import CrossSums, ShockLane, ShockSums
@@ -389,6 +389,21 @@ def longer_lags(steps: int, paths: int) -> Findings:
     return of_one_number(draw, lambda total: untied.lags_finding(n, total), 0.0, math.sqrt(10 * n))
 
 
+def missing_together(n: int, share: float) -> Findings:
+    """Values of two series, each missing by itself with the same chance: how many of n are missing in both."""
+    chances = np.outer((share, 1.0 - share), (share, 1.0 - share)).ravel()
+    beyond = np.outer((1.0 - share, -share), (1.0 - share, -share)).ravel()
+    v = share * (1.0 - share)
+    third, fourth = (v * (1.0 - 2.0 * share)) ** 2, (v * (1.0 - 3.0 * v)) ** 2
+
+    def finding(total: float) -> Finding:
+        sums = masks.MaskSums()
+        sums.sums[0] = n, total, n * v, n * v * v, n * third, n * (fourth - 3.0 * v**4)
+        return next(sums.checks("x ~ y")).finding  # type: ignore[return-value]
+
+    return of_one_number(lambda rng, count: rng.multinomial(n, chances, count) @ beyond, finding, 0.0, math.sqrt(n) * v)
+
+
 def many_products(pairs: int) -> Findings:
     """As many products, each of two normals of its own."""
     return of_one_number(
@@ -548,6 +563,8 @@ CASES = (
     Case("shocks: correlation of sizes, 1,000 pairs", 200_000, sizes_together(1000), 2000),
     Case("shocks: correlation at longer lags, 40 steps, 10 paths", 200_000, longer_lags(40, 10), 1100),
     Case("shocks: correlation at longer lags, 1,000 steps", 100_000, longer_lags(1000, 1), 2000),
+    Case("missing values of two series, 600, each with chance 0.3", 4_000_000, missing_together(600, 0.3), 600),
+    Case("missing values of two series, 12,000, chance 0.05", 4_000_000, missing_together(12_000, 0.05), 12_000),
     Case("worst of 200 steps", 1_000_000, worst_of(200), 200),
     Case("sums of 6 squares", 10_000_000, squares(6)),
 )

@@ -120,6 +120,53 @@ def widened(x: np.ndarray, size: float, axis: int) -> np.ndarray:
     return x * np.sqrt(1 + _halves(x, math.sqrt(2) * size, axis))
 
 
+def lone(x: np.ndarray, size: float, what: str) -> np.ndarray:
+    """Path 7 moved so that its level, spread or memory, standardised, is `size` in the middle of its law."""
+    from procgen.checks.apart import spreads
+
+    out, n = x.copy(), x.shape[1]
+    if what == "level":
+        out[7] += size / math.sqrt(n)
+    elif what == "spread":
+        typical = stats.chi2.median(n)
+        more = optimize.brentq(lambda v: float(spreads(np.array([v * typical]), np.array([n]))[0]) - size, 1.0, 20.0)
+        out[7] *= math.sqrt(more)
+    else:
+        phi = size / math.sqrt(n + 2)
+        for t in range(1, n):
+            out[7, t] = phi * out[7, t - 1] + math.sqrt(1 - phi**2) * x[7, t]
+    return out
+
+
+def sized_alike(values: Values, size: float, rng: np.random.Generator) -> Values:
+    """Normal series x and y whose cluster scores have the mean product `size`: density 1 + size · s(u) s(v)."""
+
+    def score(u: np.ndarray) -> np.ndarray:
+        return math.sqrt(5) * (6 * (u - 0.5) ** 2 - 0.5)
+
+    lean = size * score(stats.norm.cdf(values["x"]))
+    y = np.empty(lean.shape)
+    left = np.ones(lean.shape, dtype=bool)
+    while left.any():
+        v = rng.random(int(left.sum()))
+        taken = rng.random(v.size) * (1 + 5 * size) < 1 + lean[left] * score(v)
+        at = np.flatnonzero(left.ravel())[taken]
+        y.ravel()[at] = stats.norm.ppf(v[taken])
+        left.ravel()[at] = False
+    return {**values, "y": y}
+
+
+def missing_alike(values: Values, size: float, rng: np.random.Generator, shares: tuple[float, float]) -> Values:
+    """What is missing of y follows what is missing of x so that both, 0 or 1, have the correlation `size`."""
+    p, q = shares
+    lean = size * math.sqrt(p * (1 - p) * q * (1 - q))
+    gone = np.isnan(values["x"])
+    chance = np.where(gone, q + lean / p, q - lean / (1 - p))
+    y = rng.standard_normal(gone.shape)
+    y[rng.random(gone.shape) < chance] = np.nan
+    return {**values, "y": y}
+
+
 # sizes that are worked out from a law
 
 

@@ -12,6 +12,7 @@ import argparse
 import math
 import sys
 from collections.abc import Iterable, Iterator
+from dataclasses import replace
 from functools import lru_cache
 from pathlib import Path
 from typing import Any
@@ -36,11 +37,14 @@ from tests.studies.plants import (
     drawn,
     error_moments,
     evened,
+    lone,
     ma_of,
+    missing_alike,
     noise,
     score_shift,
     shaped,
     shifted,
+    sized_alike,
     solve,
     spoilt,
     swayed,
@@ -100,6 +104,28 @@ def late_pair(size: float, seed: int, paths: int, steps: int) -> Values:
     x = math.sqrt(1 - size**2) * x
     x[:, 1:] += size * y[:, :-1]
     return {"x": x, "y": y}
+
+
+def trailing_pair(size: float, seed: int, paths: int, steps: int) -> Values:
+    """x follows ten earlier steps of y a little: the correlations at lags 3 to 12 add up to `size`."""
+    values = draw(spec_of({"series": pair()["series"]}, paths, steps, seed))
+    weight, y = size / 10, values["y"]
+    x = math.sqrt(1 - 10 * weight**2) * values["x"]
+    for lag in range(3, 13):
+        x[:, lag:] += weight * y[:, :-lag]
+    return {"x": x, "y": y}
+
+
+GAPS = (0.2, 0.1)
+GAPPED = {"series": {name: [{"missing": {"of": [{"white_noise": {"sd": 1}}], "share": share}}]
+                     for name, share in zip("xy", GAPS, strict=True)}}  # fmt: skip
+
+
+def changed(stated: Any, change: Any) -> Any:
+    """Values of the stated spec, of which `change` makes others, given the size and a generator."""
+    return lambda size, seed, paths, steps: change(
+        draw(spec_of(stated, paths, steps, seed)), size, np.random.default_rng(seed)
+    )
 
 
 LONG = [{"fractional_gaussian_noise": {"hurst": 0.7, "sd": 1}}, {"white_noise": {"sd": 1}}]
@@ -176,6 +202,14 @@ PLANTS = (
     Plant("shocks: correlation between series", "same step", pair(), drawn(lambda d: pair(0.35 + d)), "x ~ y",
           by="correlation"),
     Plant("shocks: correlation between series", "lag +1", pair(0.0), late_pair, "x ~ y", by="weight of y's last step"),
+    Plant("shocks: correlation of sizes", "same step", {"series": pair()["series"]}, changed(
+        {"series": pair()["series"]}, sized_alike), "x ~ y", by="sizes drawn together"),
+    Plant("shocks: correlation at longer lags", "lags +3 to 12", {"series": pair()["series"]}, trailing_pair, "x ~ y",
+          by="weights of y's last steps"),
+    Plant("missing values: correlation between series", "all steps", GAPPED, changed(
+        GAPPED, lambda values, d, rng: missing_alike(values, d, rng, GAPS)), "x ~ y", by="gaps drawn together"),
+    *(Plant(f"shocks: {what} by path", "worst: path 7", noise(), spoilt(noise(), lambda x, d, _, what=what: lone(
+        x, d, what)), by=f"{what} of one path") for what in ("level", "spread", "memory")),
     Plant("covariance between series", "steps 100, 100", pair(), drawn(lambda d: pair(0.35 + d)), "x ~ y",
           by="correlation"),
     Plant("slope between series", "steps 100, 100", pair(0.0, t(9)), lambda d, seed, paths, steps: _leaning(
@@ -233,11 +267,14 @@ def _paired(x: np.ndarray, size: float) -> np.ndarray:
 def _checks(plant: Plant, gather: Any) -> Iterator[Any]:
     """The checks among which the plant's is, and hardly more: the others cost time and are not looked at."""
     from procgen.checks.judge_shocks import cross_checks, shock_checks
+    from procgen.checks.untied import untied_checks
     from procgen.checks.validate import judged
 
     pair = tuple(plant.series.split(" ~ "))
     if plant.what == "shocks: correlation between series":
         return cross_checks(plant.series, gather.cross[pair], gather.plan.shock_pairs[pair].at)
+    if plant.what.startswith("shocks: correlation "):
+        return untied_checks(plant.series, gather.cross[pair])
     if plant.what.startswith("shocks: "):
         return shock_checks(plant.series, gather.shocks[plant.series], "")
     return judged(gather)
@@ -254,7 +291,7 @@ def row_of(plant: Plant, rows: Iterable[Any]) -> Any:
 def size_of(plant: Plant, paths: int, steps: int) -> tuple[float, float] | None:
     """(the size that the check prints, the logarithm of its share of the level), from a true ensemble."""
     answer = verdict(plant.stated, draw(spec_of(plant.stated, paths, steps, 1_000_003)), LEVEL)
-    row = row_of(plant, answer.rows)
+    row = row_of(replace(plant, probe=plant.probe.split(": path")[0]), answer.rows)
     judged = sum(each.log_p is not None for each in answer.rows)
     return None if row is None or row.detectable is None else (row.detectable, math.log(LEVEL / judged))
 
