@@ -153,14 +153,14 @@ def decay_length(a: Array, negligible: float = NEGLIGIBLE) -> int:
         return _decay_of_one(float(a[0, 0]), negligible)
     powers = [a]
     while np.max(np.abs(powers[-1])) > negligible:
-        if 2 ** len(powers) > LONGEST:
+        if 1 << len(powers) > LONGEST:
             raise ValueError(f"the recursion still feels its start after {LONGEST:,} steps")
         powers.append(matmul(powers[-1], powers[-1]))
     n, reached = 0, np.eye(len(a))
     for k in range(len(powers) - 2, -1, -1):
         further = matmul(reached, powers[k])
         if np.max(np.abs(further)) > negligible:
-            n, reached = n + 2**k, further
+            n, reached = n + (1 << k), further
     return n + 1
 
 
@@ -168,14 +168,14 @@ def _decay_of_one(a: float, negligible: float) -> int:
     """`decay_length` of a single number, by the same products in plain floats: each path may have its own."""
     powers = [a]
     while abs(powers[-1]) > negligible:
-        if 2 ** len(powers) > LONGEST:
+        if 1 << len(powers) > LONGEST:
             raise ValueError(f"the recursion still feels its start after {LONGEST:,} steps")
         powers.append(powers[-1] * powers[-1])
     n, reached = 0, 1.0
     for k in range(len(powers) - 2, -1, -1):
         further = reached * powers[k]
         if abs(further) > negligible:
-            n, reached = n + 2**k, further
+            n, reached = n + (1 << k), further
     return n + 1
 
 
@@ -183,14 +183,14 @@ def decay_lengths(a: Array, negligible: float = NEGLIGIBLE) -> Array:
     """`decay_length` of many single numbers at once, by the same products: each path may have its own."""
     powers = [a]
     while (np.abs(powers[-1]) > negligible).any():
-        if 2 ** len(powers) > LONGEST:
+        if 1 << len(powers) > LONGEST:
             raise ValueError(f"the recursion still feels its start after {LONGEST:,} steps")
         powers.append(powers[-1] * powers[-1])
     n, reached = np.zeros(a.shape, np.int64), np.ones(a.shape)
     for k in range(len(powers) - 2, -1, -1):
         further = reached * powers[k]
         more = np.abs(further) > negligible
-        n, reached = np.where(more, n + 2**k, n), np.where(more, further, reached)
+        n, reached = np.where(more, n + (1 << k), n), np.where(more, further, reached)
     return n + 1
 
 

@@ -46,6 +46,13 @@ def threshold(a, x, low, high):
     return x, low
 
 
+@kernel
+def left_over(a, b, product, out):
+    """What a·b is more than its rounded value: nothing, unless product and difference are one operation."""
+    for t in range(a.shape[0]):
+        out[t] = a[t] * b[t] - product[t]
+
+
 SHAPES = [(200, 1), (50, 7), (30, 300), (0, 4), (40, 0)]
 
 
@@ -237,3 +244,19 @@ def test_a_cache_that_cannot_be_made_is_replaced(tmp_path):
     (tmp_path / "file").write_text("in the way")
     folder, _ = run_code(XDG_CACHE_HOME=str(tmp_path / "file"))
     assert "procgen-kernels-" in folder
+
+
+def test_no_product_and_sum_are_fused():
+    """Processors have one operation for a·b + c, rounded once, and compilers like to use it; other bits would come."""
+    import numba
+    from llvmlite import binding
+
+    a, b = RNG.standard_normal((2, 64, 40))
+    for form in (left_over.plain, left_over.compiled, left_over.abreast):
+        out = np.full(a.shape, np.nan)
+        form(a, b, a * b, out)
+        assert not out.any()
+    if binding.get_host_cpu_features().get("fma") or binding.get_default_triple().startswith("aarch64"):
+        fused = numba.njit(fastmath={"contract"})(left_over.plain)  # the test can fail
+        fused(a, b, a * b, out)
+        assert np.count_nonzero(out) > out.size // 2

@@ -16,7 +16,12 @@ PACKAGE = Path(__file__).parent.parent.parent / "procgen"
 # Files whose functions make values or what values are made from.
 FILES = sorted(
     path.relative_to(PACKAGE).as_posix()
-    for pattern in ("chance/**/*.py", "terms/*.py", "ensemble/draw.py", "ensemble/part.py", "ensemble/columns.py")
+    for pattern in (
+        "chance/**/*.py",
+        "terms/**/*.py",
+        *(f"ensemble/{name}.py" for name in ("draw", "part", "columns", "source")),
+        *(f"spec/{name}.py" for name in ("elapsed", "local", "timegrid", "timelist", "calendar", "zones")),
+    )
     for path in PACKAGE.glob(pattern)
 )
 
@@ -29,6 +34,7 @@ EXEMPT = {
         "distribution",
         "_distribution",
         "expect",
+        "_landmarks",
     },
     "terms": {
         "moments",
@@ -48,19 +54,25 @@ EXEMPT_PLACES = {
     ("terms/conditional.py", "burn_without_variance"),
     ("terms/garch.py", "_without_variance"),
     ("terms/vector.py", "eigenvalues"),
-    ("terms/vector.py", "shape_faults"),
+    ("terms/vector_shapes.py", "_correlation_faults"),
+    ("terms/labels.py", "entry_named"),  # a number of entries
     ("terms/gjr.py", "_without_variance"),
+    ("chance/laws/points.py", "std"),
+    ("spec/local.py", "places"),  # a running sum of whole numbers
 }
+# Who may reach the compiler; all others compile by `compiled_function`, which allows no fused or reordered operation.
+COMPILERS = {"chance/kernel.py", "chance/compiled.py", "chance/compiled_elementary.py"}
 
 ELEMENTARY = set(
-    "exp exp2 expm1 log log2 log10 log1p logaddexp sin cos tan arcsin arccos arctan arctan2 asin acos atan atan2 "
-    "sinh cosh tanh asinh acosh atanh arcsinh arccosh arctanh pow power float_power cbrt hypot sinc erf erfc gamma "
-    "lgamma dist prod fsum sumprod".split()
+    "exp exp2 expm1 log log2 log10 log1p logaddexp logaddexp2 sin cos tan arcsin arccos arctan arctan2 asin acos atan "
+    "atan2 sinh cosh tanh asinh acosh atanh arcsinh arccosh arctanh pow power float_power cbrt hypot sinc erf erfc "
+    "gamma lgamma dist prod fsum sumprod fma i0 geomspace logspace linspace angle".split()
 )
 REDUCTIONS = set(
     "sum cumsum nansum prod cumprod mean nanmean average var std nanvar nanstd median dot vdot inner matmul "
-    "tensordot einsum trapezoid trapz convolve correlate interp polyval polyfit reduce reduceat norm "
-    "cov corrcoef roots".split()
+    "tensordot einsum trapezoid trapz convolve correlate interp polyval polyfit reduce reduceat norm vecdot matvec "
+    "vecmat cov corrcoef roots cumulative_sum cumulative_prod nancumsum nanprod nancumprod trace kron cross percentile "
+    "quantile nanpercentile nanquantile nanmedian gradient histogram".split()
 )
 LIBRARIES = {"linalg", "fft", "polynomial"}
 GENERATORS = set(
@@ -68,7 +80,8 @@ GENERATORS = set(
     "standard_exponential standard_gamma standard_t integers choice shuffle permutation poisson binomial laplace "
     "logistic".split()
 )
-MODULES = {"np", "numpy", "math", "cmath"}
+METHODS = set("sum cumsum prod cumprod dot mean std var trace reduce reduceat".split())
+MODULES = {"np", "numpy", "math"}
 
 
 def parts(tree):
@@ -86,9 +99,19 @@ def parts(tree):
 
 def fault_of_power(node):
     base, exponent = node.left, node.right
-    if isinstance(base, ast.Constant) and (type(base.value) is int or (base.value == 2.0 and is_fixed(exponent))):
+    if isinstance(base, ast.Constant) and (is_fixed(exponent) or (type(base.value) is int and is_whole(exponent))):
         return None
     return "a power; write products, or a function of procgen.chance.portable"
+
+
+def is_whole(node):
+    """An exponent that cannot be an array of floats: a length, int(...), decimals or their size, a sum of these."""
+    if isinstance(node, ast.BinOp):
+        return is_whole(node.left) and is_whole(node.right)
+    if isinstance(node, ast.Call):
+        called = ast.unparse(node.func)
+        return called in {"len", "int"} or (called == "abs" and is_whole(node.args[0]))
+    return is_fixed(node) or (isinstance(node, ast.Name) and node.id == "decimals")
 
 
 def is_fixed(node):
@@ -118,7 +141,7 @@ def fault_of_attribute(node):
 def fault_of_method(function):
     """What is wrong with calling a method of an array; a parameter or a field may well be named `mean`."""
     module = isinstance(function.value, ast.Name) and function.value.id in MODULES
-    if function.attr in {"sum", "cumsum", "prod", "dot", "mean", "std", "reduce"} and not module:
+    if function.attr in METHODS and not module:
         return f"{function.attr}, a reduction in an order that is not ours"
     return None
 
@@ -131,8 +154,30 @@ def fault_of_import(node):
         if source.split(".")[0] in MODULES and set(names) & (ELEMENTARY | REDUCTIONS | LIBRARIES | GENERATORS):
             return f"import of {', '.join(names)} from {source}"
     else:
+        for alias in node.names:
+            if alias.name.split(".")[0] in MODULES and (alias.asname not in {None, "np"} or "." in alias.name):
+                return f"import {ast.unparse(alias)}; numpy as np and math as math are looked through"
         source = node.names[0].name
-    return f"import of {source}" if source.split(".")[0] in {"scipy", "random", "statistics"} else None
+    refused = {"scipy", "random", "statistics", "cmath", "operator", "numba", "llvmlite"}
+    return f"import of {source}" if source.split(".")[0] in refused else None
+
+
+def fault_of_call(node):
+    """What is wrong with a call by name, or with how an array is made or counted."""
+    called = ast.unparse(node.func)
+    words = {keyword.arg: keyword.value for keyword in node.keywords}
+    if called in {"sum", "pow", "complex"}:
+        return f"Python's {called}"
+    if called == "getattr" and ast.unparse(node.args[0]) in MODULES:
+        return "a function by its name as text; write it out"
+    if called in {"np.arange", "numpy.arange"}:
+        step = words.get("step", node.args[2] if len(node.args) > 2 else ast.Constant(1))
+        value = step.operand if isinstance(step, ast.UnaryOp) else step
+        if not (isinstance(value, ast.Constant) and value.value == int(value.value)):
+            return "arange with a step, start + i·step in one operation on some processors; multiply np.arange(n)"
+    if called.endswith("bincount") and "weights" in words:
+        return "bincount with weights, a sum"
+    return None
 
 
 def fault(node):
@@ -147,10 +192,10 @@ def fault(node):
         return fault_of_attribute(node)
     if isinstance(node, ast.Import | ast.ImportFrom):
         return fault_of_import(node)
-    if isinstance(node, ast.Call) and isinstance(node.func, ast.Attribute):
-        return fault_of_method(node.func)
-    if isinstance(node, ast.Call) and isinstance(node.func, ast.Name) and node.func.id in {"sum", "pow"}:
-        return f"Python's {node.func.id}"
+    if isinstance(node, ast.Constant) and isinstance(node.value, complex):
+        return "a complex number, whose product is fused on some processors"
+    if isinstance(node, ast.Call):
+        return (fault_of_method(node.func) if isinstance(node.func, ast.Attribute) else None) or fault_of_call(node)
     return None
 
 
@@ -162,7 +207,7 @@ def faults(source, file):
         if exempt & set(within) or any((file, name) in EXEMPT_PLACES for name in within):
             continue
         what = fault(node)
-        if what:
+        if what and not (file in COMPILERS and what.startswith(("import of numba", "import of llvmlite"))):
             found.append(f"procgen/{file}, line {node.lineno}, in {'.'.join(within) or 'the module'}: {what}")
     return found
 
@@ -175,6 +220,21 @@ def test_value_code_is_portable(file):
 def test_the_files_are_there():
     assert {"chance/streams.py", "chance/normal.py", "chance/laws/base.py", "terms/garch.py"} <= set(FILES)
     assert {"ensemble/draw.py", "ensemble/part.py", "ensemble/columns.py"} <= set(FILES)
+
+
+def test_one_place_says_how_to_compile():
+    """Fused a·b + c, other orders of sums, or threads would be other bits: see tests/chance/test_kernel.py."""
+    said = []
+    for path in sorted(PACKAGE.rglob("*.py")):
+        file, tree = path.relative_to(PACKAGE).as_posix(), ast.parse(path.read_text(encoding="utf-8"))
+        for node in ast.walk(tree):
+            if isinstance(node, ast.Import | ast.ImportFrom) and file not in COMPILERS:
+                assert "numba" not in ast.unparse(node), (file, node.lineno)
+            if isinstance(node, ast.Attribute) and node.attr in {"jit", "njit", "vectorize", "guvectorize", "stencil"}:
+                said.append((file, node.attr))
+            if isinstance(node, ast.keyword) and node.arg in {"fastmath", "parallel"}:
+                assert ast.unparse(node.value) == "False", (file, node.lineno)
+    assert said == [("chance/kernel.py", "njit")]
 
 
 def test_exemptions_are_used():
@@ -217,6 +277,26 @@ def test_exemptions_are_used():
         "np.mean(x)",
         "x.mean()",
         "np.einsum('ij,jk', a, b)",
+        "np.add.reduceat(x, edges)",
+        "x.cumprod()",
+        "x.var()",
+        "np.cumulative_sum(x)",
+        "2 ** x",
+        "2 ** -x",
+        "3.0 ** k",
+        "np.arange(0.0, 1.0, 0.1)",
+        "np.arange(0, 1, step=h)",
+        "np.linspace(0, 1, n)",
+        "np.bincount(k, weights=x)",
+        "getattr(np, name)(x)",
+        "import numpy as xp",
+        "import math as m",
+        "import numpy.linalg",
+        "import cmath",
+        "from operator import matmul",
+        "import numba",
+        "math.fma(a, b, c)",
+        "x * 2j",
     ],
 )
 def test_a_breach_is_seen(line):
@@ -233,6 +313,13 @@ def test_a_breach_is_seen(line):
         "2.0 ** -53",
         "2**62 // 16",
         "10 ** decimals",
+        "10 ** abs(decimals)",
+        "2 ** (len(rows) - 1)",
+        "1 << k",
+        "np.arange(1.0, n + 1.0)",
+        "np.arange(n, 0, -1)",
+        "np.bincount(k)",
+        "np.add.accumulate(x)",  # one after the other, which a sum is not
         "2.0 ** -(_OCTAVES + 1)",
         "from procgen.chance.portable import exp, log",
         "exp(x) + portable.exp(x)",
