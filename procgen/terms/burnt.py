@@ -68,6 +68,8 @@ def burnt(
             if stop > -head:  # by then all have joined
                 outputs = values if isinstance(values, dict) else {"": values}
                 kept.append({name: rows[max(-head - start, 0) :] for name, rows in outputs.items()})
+    if joined < len(order):  # some have nothing to forget
+        state = {name: np.concatenate([rows, rest[name][:, joined:]], 1) for name, rows in state.items()}
     back = np.argsort(order, kind="stable")
     state = {name: rows[:, back] for name, rows in state.items()}
     if not head:

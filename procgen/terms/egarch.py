@@ -11,6 +11,7 @@ from procgen.chance.portable import exp, log
 from procgen.spec.declare import Parameter, Real
 from procgen.terms.base import LAW, Ahead, Unknown, number, signed, without_gap
 from procgen.terms.conditional import BEFORE, FORGOTTEN, INFINITE, Conditional, left_from
+from procgen.terms.rows import plain
 from procgen.terms.start import companion, decay_length
 
 NEGLIGIBLE = 1e-12
@@ -41,6 +42,8 @@ class Egarch(Conditional):
     purpose = "white shocks whose log variance follows the size and sign of the shock before"
     source = "Nelson (1991)"
     example = "egarch: {scale: 1, alpha: 0.2, gamma: -0.1, beta: 0.9}"
+    by_rows = ("scale", "omega", "alpha", "gamma", "beta")
+    begins_by_rows = True
     parameters: ClassVar[tuple[Parameter, ...]] = (
         SCALE,
         Parameter("omega", "ω", Real(), "the constant in the log variance, instead of `scale`", default=None),
@@ -76,7 +79,7 @@ class Egarch(Conditional):
         """E ln h."""
         if self.omega is not None:
             return self.omega / (1.0 - self.beta)
-        return float(log(self.values["scale"] * self.values["scale"]))
+        return plain(log(self.values["scale"] * self.values["scale"]))
 
     def _sides(self, z):
         """α (|z| − E|z|) + γ z."""
@@ -84,7 +87,10 @@ class Egarch(Conditional):
 
     def scale(self):
         """Standard deviation while the log variance is at its mean, in the series' unit."""
-        return float(np.sqrt(exp(self.mean_log())))
+        return plain(np.sqrt(exp(self.mean_log())))
+
+    def persistence(self):
+        return self.beta if np.all(self.beta) else None  # one of 0 has nothing to forget
 
     def burn(self):
         """Steps until the log variance has forgotten where it began, to 1e-12."""
@@ -94,13 +100,13 @@ class Egarch(Conditional):
         """ln h at step 0, less its mean, that follows from the given past."""
         h, e = self.before["variance"][-1], self.before["shocks"][-1]
         z = e / np.sqrt(h)
-        return float(self.beta * (log(h) - self.mean_log()) + self._sides(z))
+        return plain(self.beta * (log(h) - self.mean_log()) + self._sides(z))
 
     def rest(self):
         return {"x": np.zeros((1, 1))}
 
     def left(self):
-        return {"x": np.full((1, 1), self.first())}
+        return {"x": np.full((1, np.size(self.first())), self.first())}
 
     def recurse(self, inputs, state, at):
         z = inputs[0]

@@ -8,6 +8,7 @@ from procgen.chance.portable import cos_turns
 from procgen.spec.declare import Choice, Moment, Parameter, Real, Reals, Records, Span, Whole
 from procgen.terms.base import number, signed, steps_since
 from procgen.terms.level import Known
+from procgen.terms.rows import alike
 
 
 class Seasonal(Known):
@@ -17,7 +18,7 @@ class Seasonal(Known):
     source = "common practice, no source"
     example = "seasonal: {period: 24, harmonics: [{amplitude: 42, peak: 18}, {amplitude: 9}]}"
     knows = "mean; no variance"
-    by_rows = ("harmonics",)
+    by_rows = ("harmonics", "profile")
     begins_by_rows = True
     parameters = (
         Parameter("period", "P", Span(), "length of one cycle", unit="steps"),
@@ -86,13 +87,13 @@ class Seasonal(Known):
         return x
 
     def _profile(self, steps):
-        centred, total = np.array(self.profile, dtype=np.float64), _total(self.profile)
+        centred, total = np.array(alike(self.profile), dtype=np.float64), _total(self.profile)
         if self.centre == "sum":
             centred = centred - total / len(self.profile)
         elif self.centre == "mean":
             centred = centred * (len(self.profile) / total)
         place = np.floor((steps - self.first) * len(self.profile) / self.period).astype(np.int64)
-        return centred[place % len(self.profile)]
+        return centred[(place if centred.ndim == 1 else place[:, 0]) % len(self.profile)]
 
     def equation(self, *inputs):
         if self.profile is not None:

@@ -12,6 +12,7 @@ from procgen.spec.declare import Parameter, Real
 from procgen.terms.base import LAW, Ahead, Draw, Term, Unknown, number, signed
 from procgen.terms.conditional import SD
 from procgen.terms.egarch import SCALE, log_recursion
+from procgen.terms.rows import Unlike, plain
 from procgen.terms.start import companion, decay_length
 
 NORMAL = Normal()
@@ -26,6 +27,8 @@ class StochasticVolatility(Term):
     knows = "variance, kurtosis, autocorrelation of squares; law of the variance; uncorrelated, not independent"
     noise = True
     outputs = ("variance",)
+    by_rows = ("scale", "sd", "phi", "eta")
+    begins_by_rows = True
     parameters: ClassVar[tuple[Parameter, ...]] = (
         SCALE,
         Parameter("sd", SD.symbol, SD.domain, "unconditional standard deviation, instead of `scale`", None, SD.unit),
@@ -55,16 +58,16 @@ class StochasticVolatility(Term):
     def mean_log(self):
         """E ln h."""
         if self.values["scale"] is not None:
-            return float(log(self.values["scale"] * self.values["scale"]))
-        return float(log(self.sd * self.sd)) - self.spread() * self.spread() / 2.0
+            return plain(log(self.values["scale"] * self.values["scale"]))
+        return plain(log(self.sd * self.sd)) - self.spread() * self.spread() / 2.0
 
     def spread(self):
         """Standard deviation of ln h."""
-        return self.eta / float(np.sqrt(1.0 - self.phi * self.phi))
+        return self.eta / plain(np.sqrt(1.0 - self.phi * self.phi))
 
     def scale(self):
         """Unconditional standard deviation, in the series' unit."""
-        return float(np.sqrt(exp(self.mean_log() + self.spread() * self.spread() / 2.0)))
+        return plain(np.sqrt(exp(self.mean_log() + self.spread() * self.spread() / 2.0)))
 
     def as_member(self):
         """None: its variance cannot be drawn with linear terms."""
@@ -75,6 +78,8 @@ class StochasticVolatility(Term):
 
     def reach(self, head):
         # Without leverage the past is drawn backwards from step 0; with it the shocks before step 0 matter.
+        if self.rho and np.ndim(self.phi):
+            raise Unlike("each path begins as far back as its own phi asks for")
         if self.rho and self.phi:
             head = max(head, decay_length(companion((self.phi,), (), 1, 0)[0]))
         elif self.rho:

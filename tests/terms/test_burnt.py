@@ -9,7 +9,7 @@ from procgen.terms import by_path
 DRAWN = {"draw": {"uniform": [0.05, 0.15]}, "over": "path"}
 GARCH = {"garch": {"sd": 1, "alpha": DRAWN, "beta": 0.8}}
 # Beside this one all paths have graphs of their own.
-PATH_BY_PATH = {"stochastic_volatility": {"sd": 1.0, "phi": DRAWN, "eta": 0.3}}
+PATH_BY_PATH = {"stochastic_volatility": {"sd": 1.0, "phi": DRAWN, "eta": 0.3, "rho": -0.3}}
 FEW = {"draw": {"choice": [0.8, 0.85, 0.9]}, "over": "path"}
 BODIES = {
     "garch": GARCH,

@@ -54,6 +54,26 @@ BODIES = {
         {"gjr_garch": {"omega": drawn(0.1, 1), "alpha": 0.1, "gamma": drawn(0, 0.1), "beta": drawn(0.5, 0.7),
                        "before": {"variance": [2.0], "shocks": [-1.0]}}}
     ],
+    "log variance": [
+        lagged(3, {"egarch": {"scale": drawn(1, 2), "alpha": drawn(0.1, 0.3), "gamma": drawn(-0.1, 0.1),
+                              "beta": drawn(0.5, 0.9)}})
+    ],
+    "log variance that may forget": [
+        {"egarch": {"omega": drawn(-1, 1), "alpha": 0.1, "gamma": 0.1, "law": STUDENT, "allow_infinite_variance": True,
+                    "beta": {"draw": {"choice": [0.0, 0.3, 0.6]}, "over": "path"}}}
+    ],
+    "log variance from a past": [
+        {"egarch": {"scale": drawn(1, 2), "alpha": drawn(0.1, 0.3), "gamma": 0.1, "beta": drawn(0.1, 0.9),
+                    "before": {"variance": [2.0], "shocks": [-1.0]}}}
+    ],
+    "volatility": [lagged(3, {"stochastic_volatility": {"sd": drawn(1, 2), "phi": drawn(-0.5, 0.9), "eta": 0.3}})],
+    "volatility with leverage": [
+        lagged(2, {"stochastic_volatility": {"scale": drawn(1, 2), "phi": 0.6, "eta": drawn(0.1, 0.3), "rho": -0.6}})
+    ],
+    "ma of volatility": [
+        {"ma": {"theta": 0.5, "shock": {"stochastic_volatility": {"sd": drawn(1, 2), "phi": drawn(0, 0.9),
+                                                                  "eta": drawn(0.1, 0.3)}}}}
+    ],
     "arch": [{"arch": {"omega": drawn(0.1, 1), "alpha": drawn(0.1, 0.8)}}],
     "spread": [{"white_noise": {"spread": drawn(1, 2), "law": {"stable": {"alpha": 1.5}}}}],
     "pulled": [lagged(3, {"ornstein_uhlenbeck": {"rate": drawn(0.01, 2), "mean": drawn(-2, 2), "total_sd": 1.5}})],
@@ -63,6 +83,8 @@ BODIES = {
     "levels": [
         lagged(2, {"trend": {"level": drawn(0, 1), "slope": drawn(0, 1), "bends": [{"at": 3, "slope": drawn(-1, 1)}]}}),
         {"constant": drawn(-1, 1), "times": drawn(1, 2)},
+        lagged(2, {"as": "shape",
+                   "seasonal": {"period": 6, "profile": [drawn(1, 2), 2.0, drawn(3, 4)], "centre": "mean"}}),
         {"seasonal": {"period": 7, "harmonics": [{"amplitude": drawn(1, 2)}, {"amplitude": 0.5}]}, "times": 0.5},
     ],
     "within others": [
@@ -125,7 +147,8 @@ def test_one_graph_is_made_for_all_paths(monkeypatch):
 @pytest.mark.parametrize(
     "entry",
     [
-        {"stochastic_volatility": {"sd": 1.0, "phi": drawn(0.1, 0.9), "eta": 0.3}},
+        {"stochastic_volatility": {"sd": 1.0, "phi": drawn(0.1, 0.9), "eta": 0.3, "rho": -0.5}},
+        {"stochastic_volatility": {"sd": 1.0, "phi": 0.5, "eta": 0.3, "rho": drawn(-0.5, 0.5)}},
         {"ar": {"phi": drawn(0.1, 0.9), "shock": GARCH}},  # the garch begins where its reader does, on each path
     ],
 )

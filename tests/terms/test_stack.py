@@ -31,6 +31,7 @@ BODIES = {
     "arima": {"arima": {"d": 1, "phi": 0.4, "theta": -0.3, "drift": 0.2, "sd": 1.0}},
     "gjr": {"gjr_garch": {"omega": 0.1, "alpha": 0.05, "gamma": 0.1, "beta": 0.7}},
     "volatility": {"stochastic_volatility": {"sd": 1.0, "phi": 0.9, "eta": 0.3}},
+    "leverage": {"stochastic_volatility": {"sd": 1.0, "phi": 0.9, "eta": 0.3, "rho": -0.5}},
     "trend": {"trend": {"level": 3.0, "slope": 0.2, "bends": [{"at": 4, "slope": -0.1}]}},
     "season": {"seasonal": {"period": 6, "harmonics": [{"amplitude": 2.0}, {"amplitude": 0.5}]}},
     "profile": {"seasonal": {"period": 3, "profile": [1.0, 2.0, 4.0]}},
@@ -102,9 +103,9 @@ def test_these_begin_and_run_as_rows(name):
 
 @pytest.mark.parametrize("name", ["noise", "ar1", "garch", "ar_student"])
 def test_these_run_as_rows_beside_one_that_begins_path_by_path(name):
-    """Here a stochastic volatility: then all paths have graphs of their own."""
+    """Here a stochastic volatility with leverage: then all paths have graphs of their own."""
     body = varied(BODIES[name], next(iter(places(BODIES[name]))))
-    series = {"x": [body], "y": [varied(BODIES["volatility"], ("stochastic_volatility", "phi"))]}
+    series = {"x": [body], "y": [varied(BODIES["leverage"], ("stochastic_volatility", "phi"))]}
     raw = {"seed": 3, "paths": PATHS, "time": {"steps": STEPS}, "series": series}
     runner = run(build(read_raw(raw, catalogue(), LAWS)), 0, PATHS)
     stacks = [node.term for node, _ in runner._nodes if node.name.startswith("x.")]
