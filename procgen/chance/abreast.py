@@ -48,18 +48,21 @@ def passed(value: Any, kind: Any) -> Any:
 
 
 def abreast(definition: ast.FunctionDef, kinds: Mapping[str, Any], returns: int) -> str | None:
-    """A module with `run(lanes, *arguments, *rows)`; None where the kernel is not one loop over steps."""
+    """A module with `run(lanes, *arguments, *kept, *rows)`, `kept` a row for each argument that moves.
+
+    None where the kernel is not one loop over steps.
+    """
     loops = [node for node in definition.body if isinstance(node, ast.For)]
     if len(loops) != 1 or None in kinds.values():
         return None
     place = definition.body.index(loops[0])
     before, after = definition.body[:place], definition.body[place + 1 :]
-    moved = _assigned(loops[0].body)
-    if moved & _assigned(before) or any(kinds[name] not in _ROWS for name in moved & kinds.keys()):
+    carried = [name for name in kinds if name in moved(definition)]
+    if _assigned(loops[0].body) & _assigned(before) or any(kinds[name] not in _ROWS for name in carried):
         return None
-    carried = sorted(moved & kinds.keys())
-    writer = _Abreast({**kinds, **dict.fromkeys(carried, "row")})
-    lines = [f"{name}_given = {name}\n{name} = np.empty(lanes)\n{name}[:] = {name}_given" for name in carried]
+    kept = [f"{name}_kept" for name in carried]
+    given, writer = _Abreast(kinds), _Abreast({**kinds, **dict.fromkeys(carried, "row")})
+    lines = [_each(own, given, name) + f"\n{name} = {own}" for name, own in zip(carried, kept, strict=True)]
     lines += [ast.unparse(writer.visit(copy.deepcopy(node))) for node in before if not isinstance(node, ast.Expr)]
     loop = copy.deepcopy(loops[0])
     loop.iter = writer.visit(loop.iter)
@@ -72,12 +75,23 @@ def abreast(definition: ast.FunctionDef, kinds: Mapping[str, Any], returns: int)
     if not all(isinstance(result, ast.Name) and kinds.get(result.id) in _ROWS for result in results):
         return None
     rows = [f"row{i}" for i in range(returns)]
-    lines += [f"{row}[:] = {ast.unparse(result)}" for row, result in zip(rows, results, strict=True)]
+    lines += [_each(row, writer, ast.unparse(result)) for row, result in zip(rows, results, strict=True)]
     body = "\n".join(lines).replace("\n", "\n    ")
-    return f"def run(lanes, {', '.join((*kinds, *rows))}):\n    {body}\n\nrun = compiled(run)\n"
+    return f"def run(lanes, {', '.join((*kinds, *kept, *rows))}):\n    {body}\n"
 
 
 _ROWS = ("row", "one", "number")
+
+
+def _each(row: str, writer: _Abreast, name: str) -> str:
+    """The text that fills a row of all paths with what is said of one: an assignment to a slice might raise."""
+    return f"for lane in range(lanes):\n    {row}[lane] = {ast.unparse(writer.visit(ast.Name(name, ast.Load())))}"
+
+
+def moved(definition: ast.FunctionDef) -> frozenset[str]:
+    """Arguments that are given another value in the loop over steps."""
+    bodies = [node for loop in definition.body if isinstance(loop, ast.For) for node in loop.body]
+    return frozenset(_assigned(bodies) & {argument.arg for argument in definition.args.args})
 
 
 def _assigned(nodes: list[ast.stmt]) -> set[str]:

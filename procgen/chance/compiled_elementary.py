@@ -77,7 +77,6 @@ def _log(x):
     return k * _LN2_HIGH - ((half - r) - f)
 
 
-@compiled_function
 def exp(x, out):
     """e**x of float64 vectors; out may be x."""
     for i in range(x.shape[0]):
@@ -86,7 +85,6 @@ def exp(x, out):
         out[i] = found if value == value else np.nan
 
 
-@compiled_function
 def log(x, out):
     """log x of float64 vectors of ordinary numbers; out may be x."""
     for i in range(x.shape[0]):

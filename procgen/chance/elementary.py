@@ -12,7 +12,7 @@ from __future__ import annotations
 import numpy as np
 
 from procgen.chance.blocks import Scratch, blockwise
-from procgen.chance.kernel import is_compiling
+from procgen.chance.kernel import is_compiling, machine
 
 _LN2_HIGH, _LN2_LOW = 6.93147180369123816490e-01, 1.90821492927058770002e-10
 _PER_LN2 = 1.44269504088896338700e00
@@ -110,9 +110,7 @@ def horner(coefficients: tuple[float, ...], x: np.ndarray, out: np.ndarray) -> n
 
 def _exp(x: np.ndarray, out: np.ndarray, scratch: Scratch) -> None:
     if is_compiling():
-        from procgen.chance import compiled_elementary
-
-        compiled_elementary.exp(x, out)
+        machine("compiled_elementary", "exp")(x, out)
         return
     times_exp(1.0, x, 0.0, out, scratch)
 
@@ -157,9 +155,7 @@ def _log(x: np.ndarray, out: np.ndarray, scratch: Scratch) -> None:
     if not (is_compiling() and x.size and x.min() >= 2.0**-1022 and x.max() < np.inf):
         log_of(x, out, scratch)
         return
-    from procgen.chance import compiled_elementary
-
-    compiled_elementary.log(x, out)
+    machine("compiled_elementary", "log")(x, out)
 
 
 def log_of(x: np.ndarray, out: np.ndarray, scratch: Scratch) -> None:

@@ -22,15 +22,17 @@ import textwrap
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from contextvars import ContextVar
-from functools import cache, cached_property, update_wrapper
+from functools import cache, cached_property, partial, update_wrapper
 from hashlib import sha256
+from importlib import import_module
 from importlib.util import find_spec
 from pathlib import Path
 from typing import Any, Literal
 
 import numpy as np
 
-from procgen.chance.abreast import abreast, by_step, kind_of, passed
+from procgen.chance.abreast import abreast, by_step, kind_of, moved, passed
+from procgen.chance.machine import Machine, write
 
 _NARROW = 256  # paths: with more, the compiled form takes all of them at each step (measured: 2-4 against 10 ns)
 _compiling: ContextVar[bool] = ContextVar("compiling", default=False)
@@ -89,7 +91,8 @@ class Kernel:
         if run is None:
             return self.plain(*args)
         rows = [np.empty(lanes) for _ in range(self._text.returns)]
-        run(lanes, *map(passed, args, kinds), *rows)
+        kept = [np.empty(lanes) for name in names if name in self._text.moved]
+        run(lanes, *map(passed, args, kinds), *kept, *rows)
         return _as_returned(rows)
 
     @cached_property
@@ -145,6 +148,7 @@ class _Text:
         value = values[-1] if values else None
         self.returns = len(value.elts) if isinstance(value, ast.Tuple) else int(value is not None)
         self.by_step = by_step(definition)
+        self.moved = moved(definition)
         self.definition = _Choices().visit(definition)
         self.source = ast.unparse(self.definition)
 
@@ -157,8 +161,7 @@ class _Text:
             f"{self.source}\n\n{self.name} = compiled({self.name})\n\n"
             f"def run(lanes, {', '.join((*self.names, *rows))}):\n"
             f"    for lane in range(lanes):\n"
-            f"        {store + ' = ' if rows else ''}{call}\n\n"
-            f"run = compiled(run)\n"
+            f"        {store + ' = ' if rows else ''}{call}\n"
         )
 
 
@@ -199,14 +202,38 @@ def _lanes(args: tuple) -> int:
     return max((arg.shape[1] for arg in args if isinstance(arg, np.ndarray) and arg.ndim == 2), default=1)
 
 
-def _compile(text: str, name: str) -> Callable:
+def _compile(text: str, name: str) -> Machine:
     """The function `run` of a module text, compiled, and kept in the user's cache from one process to the next."""
+    return Machine(name, text, lambda: _function(text, name), cache_folder)
+
+
+def _function(text: str, name: str) -> Callable:
+    """The function `run` of a module text, as it stands, in a file of the cache."""
     path = cache_folder() / f"{name}-{sha256(text.encode()).hexdigest()[:16]}.py"
     if not path.exists():
-        _write(path, text)
-    scope: dict[str, Any] = {"np": np, "compiled": compiled_function, "__name__": __name__}  # numba's cache imports it
+        write(path, text.encode())
+    compiled = partial(compiled_function, inline="always")
+    scope: dict[str, Any] = {"np": np, "compiled": compiled, "__name__": __name__}  # numba's cache imports it
     exec(compile(text, str(path), "exec"), scope)  # our own text, not the file's: that only lends its name
     return scope["run"]
+
+
+@cache
+def machine(module: str, function: str) -> Machine:
+    """A function of a module of this room that imports numba, which is imported only where it is not compiled yet."""
+    here = Path(__file__).parent
+    text = "".join([file.read_text(encoding="utf-8") for file in sorted(here.glob("*.py"))])
+
+    def given() -> Callable:
+        return getattr(import_module(f"{__package__}.{module}"), function)
+
+    return Machine(f"{module}.{function}", text, given, cache_folder)
+
+
+def are_kept() -> bool:
+    """Whether the kernels that nearly all draws need are kept as machine code here."""
+    key, nothing = np.uint64(0), np.empty((0, 0))
+    return machine("compiled", "uniforms").is_kept(key, key, 0, 0, nothing)
 
 
 def compiled_function(function: Callable, inline: Literal["never", "always"] = "never") -> Callable:
@@ -239,10 +266,3 @@ def cache_folder() -> Path:
     temporary = tempfile.mkdtemp(prefix="procgen-kernels-")
     atexit.register(shutil.rmtree, temporary, ignore_errors=True)
     return Path(temporary)
-
-
-def _write(path: Path, text: str) -> None:
-    handle, draft = tempfile.mkstemp(dir=path.parent)
-    with os.fdopen(handle, "w", encoding="utf-8") as file:
-        file.write(text)
-    os.replace(draft, path)

@@ -17,7 +17,7 @@ from hashlib import sha256
 
 import numpy as np
 
-from procgen.chance.kernel import is_compiling
+from procgen.chance.kernel import is_compiling, machine
 
 STREAM_VERSION = 1
 LANES = 16
@@ -73,7 +73,10 @@ class Stream:
         """Words, or uniforms where out is float64."""
         if out.shape != (steps, paths):
             raise ValueError(f"expected out of shape (steps, paths) = ({steps}, {paths}), got {out.shape}")
-        draw = _Compiled(self.key) if is_compiling() else _Plain(self.key)
+        if is_compiling():
+            _compiled(self.key, first_path, first_step, out)
+            return
+        draw = _Plain(self.key)
         before = min(steps, max(0, -first_step))
         for section, first, rows in (
             (1, -first_step - before, out[:before][::-1]),
@@ -131,18 +134,13 @@ class _Plain:
         self.philox.state = self.state
 
 
-class _Compiled:
-    """The same fillings by `procgen.chance.compiled`."""
-
-    def __init__(self, key: tuple[int, int]) -> None:
-        from procgen.chance import compiled
-
-        self.functions = {np.dtype(np.float64): compiled.uniforms, np.dtype(np.uint64): compiled.words}
-        self.key = tuple(map(np.uint64, key))
-
-    def fill(self, section: int, group: int, first: int, lanes: slice, out: np.ndarray) -> None:
-        address = map(np.uint64, (group, section, first))
-        self.functions[out.dtype](*self.key, *address, lanes.start, lanes.stop, out)
+def _compiled(key: tuple[int, int], first_path: int, first_step: int, out: np.ndarray) -> None:
+    """The same filling by `procgen.chance.compiled`."""
+    made = np.ascontiguousarray(out)
+    fill = machine("compiled", "uniforms" if out.dtype == np.float64 else "words")
+    fill(*map(np.uint64, key), first_step, first_path, made)
+    if made is not out:
+        out[...] = made
 
 
 def _check_address(first_path: int, paths: int, first_step: int, steps: int) -> None:

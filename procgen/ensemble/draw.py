@@ -9,7 +9,7 @@ import numpy as np
 from procgen.chance import kernel
 from procgen.ensemble.columns import Column
 from procgen.ensemble.errors import EnsembleError
-from procgen.ensemble.plan import Block, lanes, tiles
+from procgen.ensemble.plan import CACHED, TILE, Block, lanes, tiles
 from procgen.ensemble.source import Run, Source
 
 Tick = Callable[[int], None]  # called with the rows just drawn; may raise to stop the work
@@ -18,14 +18,17 @@ State = dict[str, np.ndarray]
 WIDE_REPAYS = 8_000_000  # values of terms that gain, some 50 ns each; until then they are drawn plain
 REUSED = 24 << 20  # bytes of a block of memory
 COMPILING_REPAYS = 1_000_000  # narrow steps; each costs 1 to 7 µs in the interpreter, and compiling a second or two
+LOADING_REPAYS = 100_000  # the same where there is machine code, which is loaded in 0.06 s
+SHARE_REPAYS = 24_000_000, 4_000_000  # values of a process, 10 to 25 ns each: to compile, which pays next time; to load
 
 
 class Drawer:
     """Draws the blocks of one chain; keeps the run of each range of paths for the steps that follow."""
 
-    def __init__(self, source: Source, tick: Tick = lambda rows: None, narrow_steps: int = 0):
+    def __init__(self, source: Source, tick: Tick = lambda rows: None, narrow_steps: int = 0, share: int = 0):
+        """`share` is the number of values that this process may expect to draw, here and elsewhere."""
         self.source, self.tick = source, tick
-        self.compile = narrow_steps > COMPILING_REPAYS and kernel.available()
+        self.compile = repays(source, narrow_steps, share)
         self._left = WIDE_REPAYS if getattr(source, "gains", False) and kernel.available() else None
         self._runs: dict[tuple[int, int], Run] = {}
         self._states: dict[tuple[int, int], tuple[int, State]] = {}
@@ -46,7 +49,8 @@ class Drawer:
 
     def _rows(self, block: Block, out: Mapping[str, np.ndarray]) -> None:
         run, step = self._run(block), block.first_step
-        for steps in tiles(block.steps, block.paths, len(self.source.columns)):
+        compiling = kernel.is_compiling()
+        for steps in tiles(block.steps, block.paths, len(self.source.columns), CACHED if compiling else TILE):
             with np.errstate(all="ignore"):  # what is not finite is refused below, with its place
                 tile = run.tile(steps)
             start = step - block.first_step
@@ -55,7 +59,7 @@ class Drawer:
                 wrong = np.isinf(values) if column.gaps else ~np.isfinite(values)
                 if wrong.any():
                     raise _not_finite(column, values, wrong, block.first_path, step)
-                out[column.name][:, start : start + steps] = values.T
+                turn(values, out[column.name], start)
             step += steps
             self.tick(block.paths * steps)
 
@@ -89,6 +93,23 @@ class Drawer:
             states = self._states.setdefault((int(first), int(paths)), (step, {}))[1]
             if name:
                 states[name] = values
+
+
+def repays(source: Source, narrow_steps: int, share: int) -> bool:
+    """Whether compiled kernels repay for so many narrow steps, or values of one process."""
+    if (narrow_steps <= LOADING_REPAYS and share <= min(SHARE_REPAYS)) or not kernel.available():
+        return False
+    kept = kernel.are_kept()
+    least = WIDE_REPAYS if getattr(source, "gains", False) else SHARE_REPAYS[kept]
+    return share > least or narrow_steps > (LOADING_REPAYS if kept else COMPILING_REPAYS)
+
+
+def turn(values: np.ndarray, out: np.ndarray, start: int) -> None:
+    """Values (steps, paths) into the columns from `start` on of out (paths, steps)."""
+    if kernel.is_compiling() and values.flags.c_contiguous and out.flags.c_contiguous:
+        kernel.machine("compiled", "turned")(values, out, start)
+    else:
+        out[:, start : start + len(values)] = values.T
 
 
 def _reuse_memory() -> None:

@@ -187,6 +187,36 @@ def _work(crew: Crew, work: str, helping: int, inherit: int | None, advice: str)
             helper.end()
 
 
+def in_threads(
+    work: Callable[[Any, Callable[[int], None]], Records],
+    tasks: Sequence[Any],
+    count: int,
+    progress: Progress | None,
+    rows: int,
+) -> None:
+    """Do tasks in this thread and others beside it, `count` in all; the first error is raised when all have ended."""
+    crew = Crew(Work(tasks, "", lambda records: None, progress, 0, rows))
+
+    def each() -> None:
+        try:
+            while (task := crew.next()) is not None:
+                work(task, crew.tick)
+        except Stopped:
+            pass
+        except BaseException as error:
+            crew.fail(error)
+
+    with crew.interruptible():
+        others = [threading.Thread(target=each) for _ in range(min(count, len(tasks)) - 1)]
+        for thread in others:
+            thread.start()
+        each()
+        for thread in others:
+            thread.join()
+    if crew.error is not None:
+        raise crew.error
+
+
 class Helper(threading.Thread):
     """Feeds one worker process with tasks, and takes its ticks, records and errors."""
 

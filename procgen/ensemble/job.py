@@ -12,8 +12,8 @@ from procgen.chance.streams import STREAM_VERSION
 from procgen.ensemble import engines, manifest, revealed
 from procgen.ensemble.cluster import opened
 from procgen.ensemble.columns import TYPES, as_kept, store
-from procgen.ensemble.draw import Drawer, empty
-from procgen.ensemble.engines import Engine, Progress, Work
+from procgen.ensemble.draw import Drawer, Tick, empty, repays
+from procgen.ensemble.engines import Engine, Progress, Work, default_workers
 from procgen.ensemble.ensemble import Ensemble, Memory, OnDisk
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.layouts import Layout
@@ -56,7 +56,7 @@ def render(
     out : folder to write; what is not ours in it is left alone. None: in memory, in this process.
     paths, steps, seed : instead of what the spec says.
     first_path : number of the first path; path 700 is the same path in every range that has it.
-    workers : processes; None is what the size repays, up to the processors there are.
+    workers : processes, or threads in memory; None is what the size repays, up to the processors there are.
     reveal : names `series.label[.output]` to give as columns beside the series, or "all".
     resume : go on with a render of the same spec that did not finish; of a finished one, hold all values against
         their digests and draw missing and damaged parts again.
@@ -93,10 +93,10 @@ def render(
     changes = {"paths": paths, "steps": steps, "seed": seed}
     spec, source, whole, names = _source(spec, changes, first_path, reveal, factory)
     if out is None:
-        return _in_memory(source, whole, progress)
+        return _in_memory(source, whole, workers, progress)
     job = Job(spec, source, whole, Folder(folder), names, asked, factory)
     if workers is None and scheduler is None:
-        workers = engines.default_workers(whole.rows * len(source.columns))
+        workers = default_workers(whole.rows * len(source.columns))
     return job.run(workers, scheduler, resume, overwrite, progress)
 
 
@@ -151,29 +151,32 @@ def _reveal(spec: Any, reveal: Sequence[str] | str | None) -> tuple[str, ...]:
     return tuple(dict.fromkeys(reveal))
 
 
-def _in_memory(source: Source, whole: Block, progress: Progress | None) -> Memory:
+def _in_memory(source: Source, whole: Block, workers: int | None, progress: Progress | None) -> Memory:
     need, free = whole.rows * row_bytes(source.columns), _free_memory()
     if free is not None and need > free:
         raise EnsembleError(
             f"{whole.rows} rows of {len(source.columns)} columns take {bytes_text(need)} in memory, and "
             f"{bytes_text(free)} are free; give out= to write them to files, or ask for fewer paths or steps"
         )
-    done = 0
-
-    def tick(rows: int) -> None:
-        nonlocal done
-        done += rows
-        if progress is not None:
-            progress(done, whole.rows)
-
     values = empty(whole, source.columns)
-    drawer = Drawer(source, tick, narrow_steps((whole,), row_bytes(source.columns), source.depth))
-    for batch in batches(whole, row_bytes(source.columns)):
-        rows = slice(batch.first_path - whole.first_path, batch.end_path - whole.first_path)
-        span = slice(batch.first_step, batch.end_step)
-        drawer.fill(batch, {name: data[rows, span] for name, data in values.items()})
-        if batch.end_step == whole.end_step:
-            drawer.forget(batch)
+    size, narrow = row_bytes(source.columns), narrow_steps((whole,), row_bytes(source.columns), source.depth)
+    count = default_workers(whole.rows * len(source.columns)) if workers is None else workers
+    share = whole.rows * len(source.columns) // count
+    chains: dict[int, list[Block]] = {}
+    for batch in batches(whole, size):
+        chains.setdefault(batch.first_path, []).append(batch)
+
+    def draw(chain: list[Block], tick: Tick) -> list[Any]:
+        drawer = Drawer(source, tick, narrow, share)
+        for batch in chain:
+            rows = slice(batch.first_path - whole.first_path, batch.end_path - whole.first_path)
+            span = slice(batch.first_step, batch.end_step)
+            drawer.fill(batch, {name: data[rows, span] for name, data in values.items()})
+        return []
+
+    # Threads are for compiled kernels: what the interpreter does goes one by one.
+    threads = count if repays(source, narrow, share) else 1
+    engines.in_threads(draw, [*chains.values()], threads, progress, whole.rows)
     stored = {column.name: store(values.pop(column.name), column, spare=True) for column in source.columns}
     return Memory(stored, source.columns, whole, source.stamps, source)
 
@@ -256,7 +259,7 @@ class Job:
             start = next((k for k, part in enumerate(chain) if part not in there), len(chain))
             records += [there[part] for part in chain[:start]]
             if start < len(chain):
-                tasks.append(self._task(chain, start))
+                tasks.append(self._task(chain, start, self.whole.rows * len(self.columns) // engine.size))
         done = sum(Block(**record["part"]).rows for record in records)
         todo = [task.json() for task in tasks]
         engine.run(Work(todo, WORK, records.extend, progress, done, self.whole.rows))
@@ -267,9 +270,10 @@ class Job:
         self.folder.clean_state(keep_plan=False)
         return made
 
-    def _task(self, chain: Chain, start: int) -> Task:
+    def _task(self, chain: Chain, start: int, share: int) -> Task:
         out, types = address(self.folder.path), {column.name: column.type for column in self.columns}
-        return Task(self.spec.raw, self.identity, out, self.whole, chain, start, self.reveal, self.factory, types)
+        told = self.reveal, self.factory, types, share
+        return Task(self.spec.raw, self.identity, out, self.whole, chain, start, *told)
 
     def _refuse_too_large(self) -> None:
         """Refuse what the disk cannot hold, before the parts are even planned."""

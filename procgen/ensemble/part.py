@@ -36,6 +36,7 @@ class Task:
     reveal: tuple[str, ...] = ()
     factory: str = FACTORY
     types: Mapping[str, str] = field(default_factory=dict)  # of the columns that are there already, by name
+    share: int = 0  # values that a process may expect to draw, of all tasks
 
     def json(self) -> dict[str, Any]:
         """The task as data; what tasks have in common is shared, not copied."""
@@ -66,7 +67,8 @@ def render_chain(task: Task, tick: Tick = lambda rows: None) -> list[dict[str, A
     """Draw and write the parts of a chain from `task.start` on; their records for the manifest."""
     source = open_source(task.raw, task.reveal, task.factory)
     folder = Folder(place_of(task.out))
-    drawer = Drawer(source, tick, narrow_steps(task.chain, row_bytes(source.columns), source.depth))
+    narrow = narrow_steps(task.chain, row_bytes(source.columns), source.depth)
+    drawer = Drawer(source, tick, narrow, task.share)
     records = []
     for number in range(_take_up(task, folder, drawer), len(task.chain)):
         if number < task.start:

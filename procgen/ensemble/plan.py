@@ -19,6 +19,7 @@ MOST_PARTS = 20_000  # of usual size; beyond, parts grow, so that a manifest and
 BUFFER_BYTES = 128 << 20
 GROUP_ROWS = 1 << 20
 TILE = 1 << 18
+CACHED = 1 << 16  # values of a tile that stays in the processor's cache; each tile costs 0.1 ms in the interpreter
 BUSY_ROWS = 2_000_000  # below this many rows a second worker does not repay
 PAST = 1 << 22  # values before step 0 that are drawn at once, for each term that has them
 NARROW = 128  # paths below which row-wise recursions are mostly overhead
@@ -184,8 +185,8 @@ def narrow_steps(chain: Chain, row_bytes: int, depth: int = 0) -> int:
     )
 
 
-def tiles(steps: int, paths: int, columns: int = 1) -> list[int]:
-    """Steps of each tile: about TILE values, less when very many columns are held at once."""
-    values = max(min(TILE, (BUFFER_BYTES >> 3) // columns), 1)
+def tiles(steps: int, paths: int, columns: int = 1, most: int = TILE) -> list[int]:
+    """Steps of each tile: about `most` values, less when very many columns are held at once."""
+    values = max(min(most, (BUFFER_BYTES >> 3) // columns), 1)
     count = -(-steps // max(values // paths, 1))
     return [steps * (k + 1) // count - steps * k // count for k in range(count)]
