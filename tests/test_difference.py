@@ -200,7 +200,7 @@ def test_other_seeds_share_no_shocks_and_are_not_paired(folder):
     [
         (["base"], "expected B, or --variant NAME"),
         (["base", "crisis", "--variant", "crisis"], "expected B, or --variant NAME"),
-        (["base", "nowhere.yaml"], "cannot read the spec"),
+        (["base", "nowhere.yaml"], "there is no file or folder nowhere.yaml; give a spec, the folder of an ensemble"),
         (["base", "nowhere.json"], "there is no file"),
         (["base", "values.CSV"], "values.CSV is a file of values, and these are compared with a spec: procgen"),
         (["base", "crisis", "--at", "40"], "expected steps from 0 to 39, which both have, got 40"),

@@ -51,7 +51,7 @@ def test_digests_print_as_the_command_does(spec, tmp_path):
 
 
 def test_an_ensemble_is_walked_by_names_and_by_paths(ens):
-    assert [*ens] == ["load_kw", "price"] == ens._ipython_key_completions_()
+    assert [*ens] == ["load_kw", "price"] == ens._ipython_key_completions_() and len(ens) == 2
     assert "price" in ens and "pric" not in ens
     frames = dict(ens.each_path())
     assert [*frames] == [*range(8)]
@@ -88,11 +88,38 @@ def test_pandas_finds_again_in_every_shape_what_the_arrays_hold(ens):
         (lambda spec, ens: pg.render(7), TypeError, "expected a Spec, the path of a YAML file, or a mapping"),
         (lambda spec, ens: pg.open_ensemble(ROOT), pg.EnsembleError, r"has no manifest\.json"),
         (lambda spec, ens: ens.paths(5, 9), pg.EnsembleError, "expected paths within 0 to 8"),
+        (
+            lambda spec, ens: ens.panel("load_kw"),
+            pg.EnsembleError,
+            r'roles and their names, as in {"time": "week"}, got',
+        ),
+        (lambda spec, ens: spec.set("paths=3"), pg.SpecError, r"expected values by place, as in .*, got str"),
+        (
+            lambda spec, ens: pg.difference(ens, ens, at=3),
+            pg.EnsembleError,
+            r"a list of steps, such as \[0, 47\], got 3",
+        ),
+        (lambda spec, ens: pg.difference(ens, ens, at=[0.5]), pg.EnsembleError, r"a list of steps, .* got \[0\.5\]"),
+        (lambda spec, ens: pg.difference(ens, "no"), pg.EnsembleError, "there is no file or folder no; give a spec"),
+        (lambda spec, ens: pg.open_ensemble("specs/no"), pg.EnsembleError, "there is no folder specs/no; expected"),
+        (lambda spec, ens: pg.check_digest("specs/no"), pg.EnsembleError, "there is no folder specs/no; expected"),
+        (lambda spec, ens: pg.render(spec, reveal="price.random_wlak"), pg.EnsembleError, "did you mean random_walk?"),
+        (lambda spec, ens: [*ens.each_path("lod_kw")], pg.EnsembleError, r"got 'lod_kw'; did you mean load_kw\?"),
     ],
 )
 def test_a_slip_is_answered_with_what_was_expected(spec, ens, slip, kind, answer):
     with pytest.raises(kind, match=answer):
         slip(spec, ens)
+
+
+def test_the_ensembles_in_a_folder_are_offered(spec, tmp_path):
+    for name in ("base", "heatwave"):
+        pg.render(spec.variant(name), tmp_path / "store" / name)
+    offered = r"there are ensembles in it \(base, heatwave\): give one of them, such as .*store.base$"
+    with pytest.raises(pg.EnsembleError, match=offered):
+        pg.open_ensemble(tmp_path / "store")
+    with pytest.raises(pg.EnsembleError, match=r"there is no folder .*; did you mean heatwave\?$"):
+        pg.check_digest(tmp_path / "store" / "heatwav")
 
 
 def test_every_public_name_says_what_it_is_and_what_it_takes():

@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
+
+import numpy as np
 
 from procgen.checks.held import broken
 from procgen.checks.paired import Paired, Sums
@@ -285,10 +287,12 @@ def _steps(at: Sequence[int] | None, block: Block) -> list[int]:
     last = block.steps - 1
     if at is None:
         return sorted({last * k // (HANDFUL - 1) for k in range(HANDFUL)})
+    if not isinstance(at, Iterable) or not all(isinstance(step, int | np.integer) for step in at):
+        raise EnsembleError(f"expected at to be a list of steps, such as [0, {last}], got {at!r}")
     outside = [step for step in at if not 0 <= step <= last]
     if outside:
         raise EnsembleError(f"expected steps from 0 to {last}, which both have, got {outside[0]}")
-    return sorted(dict.fromkeys(at))
+    return sorted({int(step) for step in at})
 
 
 def _side(given: Any) -> Side:
@@ -308,6 +312,10 @@ def _side(given: Any) -> Side:
             raise EnsembleError(
                 f"{path} is a file of values, and these are compared with a spec: procgen validate {path} --spec SPEC; "
                 "give a spec, the folder of an ensemble, or its manifest.json"
+            )
+        if not path.exists():
+            raise EnsembleError(
+                f"there is no file or folder {path}; give a spec, the folder of an ensemble, or its manifest.json"
             )
         return Side(str(path), spec_of(given), None)
     spec = spec_of(given)

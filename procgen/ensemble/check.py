@@ -12,7 +12,7 @@ from procgen.chance.streams import STREAM_VERSION
 from procgen.ensemble import digest, files, parquet
 from procgen.ensemble.columns import store
 from procgen.ensemble.draw import Drawer, empty
-from procgen.ensemble.ensemble import Blocks, Ensemble, OnDisk
+from procgen.ensemble.ensemble import Blocks, Ensemble, OnDisk, nothing_at
 from procgen.ensemble.errors import MEND, EnsembleError
 from procgen.ensemble.expected import departure
 from procgen.ensemble.expected import expected as read_expected
@@ -135,7 +135,7 @@ def check_digest(
     path = str(folder.path)
     data = folder.read_json(MANIFEST)
     if data is None:
-        raise EnsembleError(f"{path} has no {MANIFEST}; expected a folder that procgen render has finished")
+        raise EnsembleError(nothing_at(folder))
     manifest = Manifest.read(data, str(folder.path / MANIFEST))
     reader = Reader(folder.path, manifest, factory)
     damages, found = reader.examine(progress)

@@ -337,6 +337,6 @@ def perform(text: str) -> str:
         except EnsembleError as error:
             return json.dumps({"error": str(error)})
         except MemoryError:
-            error = "a worker ran out of memory; give it more, then go on with --resume (resume=True)"
-            return json.dumps({"error": error})
+            said = "a worker ran out of memory; give it more, then go on with --resume (resume=True)"
+            return json.dumps({"error": said})
     return json.dumps({"records": records, "rows": rows})

@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import contextlib
 from collections.abc import Iterator, Mapping, Sequence
 from functools import cached_property
+from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -27,6 +29,7 @@ if TYPE_CHECKING:
     import pandas as pd
     import pyarrow as pa
 
+HANDFUL = 5  # names of ensembles that a sentence lists
 Blocks = Iterator[tuple[Block, dict[str, np.ndarray]]]
 
 
@@ -109,6 +112,9 @@ class Ensemble(Shapes):
 
     def __iter__(self) -> Iterator[str]:
         return iter(self.names)
+
+    def __len__(self) -> int:
+        return len(self.names)
 
     def _ipython_key_completions_(self) -> list[str]:
         return [*self.names]
@@ -278,6 +284,29 @@ class OnDisk(Ensemble):
                 )
 
 
+def nothing_at(folder: Folder) -> str:
+    """Why there is no ensemble to read in a folder without a manifest, and where one may be meant."""
+    path, made = folder.path, "expected a folder that procgen render has made"
+    if (path / PLAN).exists():
+        return f"{path} is an unfinished ensemble; go on with: procgen render SPEC -o {path} --resume (resume=True)"
+    if not isinstance(path, Path):
+        return f"{path} has no {MANIFEST}; {made}"
+    if not path.exists():
+        near = did_you_mean(path.name, _ensembles_in(path.parent))
+        return f"there is no folder {path}; {made}{near and f'; {near}'}"
+    inside = _ensembles_in(path)
+    names = f"{', '.join(inside[:HANDFUL])}{', …' if len(inside) > HANDFUL else ''}"
+    hint = f"; there are ensembles in it ({names}): give one of them, such as {path / inside[0]}" if inside else ""
+    return f"{path} has no {MANIFEST}; {made}{hint}"
+
+
+def _ensembles_in(path: Path) -> list[str]:
+    """The names of the folders in a folder that are ensembles, such as variants."""
+    with contextlib.suppress(OSError):
+        return sorted(file.parent.name for file in path.glob(f"*/{MANIFEST}"))
+    return []
+
+
 def open_ensemble(path: str | Place) -> OnDisk:
     """The ensemble in a folder that `render` has finished; reads only its manifest, and checks no values.
 
@@ -290,12 +319,7 @@ def open_ensemble(path: str | Place) -> OnDisk:
     folder.refuse_file()
     data = folder.read_json(MANIFEST)
     if data is None:
-        unfinished = (folder.path / PLAN).exists()
-        raise EnsembleError(
-            f"{path} is an unfinished ensemble; go on with: procgen render SPEC -o {path} --resume (resume=True)"
-            if unfinished
-            else f"{path} has no {MANIFEST}; expected a folder that procgen render has made"
-        )
+        raise EnsembleError(nothing_at(folder))
     manifest = Manifest.read(data, str(folder.path / MANIFEST))
     refuse_changed(manifest, folder.path / MANIFEST)
     refuse_version(manifest.identity, path)

@@ -60,6 +60,11 @@ class Layout:
             raise EnsembleError(
                 "a file of layout wide holds one series, got partition paths; leave it away, or choose another layout"
             )
+        if columns is not None and not isinstance(columns, Mapping):
+            kind_given = type(columns).__name__
+            raise EnsembleError(
+                f'expected columns as roles and their names, as in {{"time": "week"}}, got {kind_given}'
+            )
         renamed = dict(columns or {})
         for role, name in renamed.items():
             if role not in ROLES[kind]:

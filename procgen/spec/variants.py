@@ -94,6 +94,9 @@ def settings_of(values: Mapping[str, Any]) -> tuple[Setting, ...]:
     """Return settings from plain data by place; SpecError with what cannot stand in a spec."""
     faults: list[Fault] = []
     made = []
+    if not isinstance(values, Mapping):
+        message = f'expected values by place, as in {{"series.load.ar.sd": 9}}, got {type(values).__name__}'
+        raise SpecError((Fault(Place(None, 0, 0, ""), message),))
     for place, value in values.items():
         if not isinstance(place, str):
             message = f"expected places that are texts, got {type(place).__name__}"

@@ -6,6 +6,7 @@ from collections import Counter
 from collections.abc import Iterator
 
 from procgen.spec.model import Entry
+from procgen.spec.words import did_you_mean
 
 USE = "use"
 
@@ -41,7 +42,8 @@ def entry_named(body: tuple[Entry, ...], owner: str, label: str, name: str) -> E
             f"{owner} has {count} terms of kind {label}{here}: write as: some_name beside the one that is meant, "
             f"and name {owner}.some_name"
         )
-    raise KeyError(f"expected one of {', '.join(found)} in {owner}, got {label!r} in {name!r}")
+    hint = did_you_mean(label, found)
+    raise KeyError(f"expected one of {', '.join(found)} in {owner}, got {label!r} in {name!r}{hint and f'; {hint}'}")
 
 
 def _by_target(entry: Entry) -> str:
