@@ -13,10 +13,12 @@ from typing import Any, NoReturn
 
 import numpy as np
 
+from procgen.chance.portable import log
 from procgen.spec.entries import walk
 from procgen.spec.model import Entry, Fault, Frozen, Place, Series, Spec, SpecError
 from procgen.spec.varying import varying_of
 from procgen.terms.base import Array, Node, Unknown
+from procgen.terms.combine import Exp
 from procgen.terms.open_start import OPEN
 from procgen.terms.past_filter import StateSpace, Through, factor, filtered
 from procgen.terms.past_parts import Part, part_of, recursion_of, unscaled
@@ -88,8 +90,11 @@ class _Departure:
 
     def made(self) -> tuple[Series, Left]:
         self._refuse_misfits()
-        rest, parts = self.past - self._known_values(), [part_of(entry, node) for entry, node in self.random]
+        rest = self.past - self._known_values()
         entry, node = self.random[0]
+        if len(self.random) == 1 and isinstance(node.term, Exp):
+            return self._within(entry, node, rest / entry.times)
+        parts = [part_of(entry, node) for entry, node in self.random]
         recursion = recursion_of(node.term)
         exact = node.term.noise or (recursion is not None and not recursion.theta)
         said: tuple[str, ...] = ()
@@ -106,6 +111,21 @@ class _Departure:
         body = tuple([by_id.get(id(e), e) for e in self.one.of])
         left = Left(len(self.past), float(self.past[-1]), said, tuple(self._replaced(new)))
         return replace(self.one, of=(*body, *extra), before=None), left
+
+    def _within(self, entry: Entry, node: Node, values: Array) -> tuple[Series, Left]:
+        """The series whose only random part is an exponential: its body leaves from the logarithms of that part."""
+        if not np.all(values > 0.0):
+            worst = int(np.argmin(values))
+            _refuse(
+                entry.place,
+                f"the past of {self.name} is not one of {node.name}: expected values above 0, as an exponential has, "
+                f"got {float(values[worst])!r} at step {worst - len(values)} when what is known beside it is taken off",
+            )
+        inner = replace(self.one, of=entry.bodies["of"], before=tuple(log(values).tolist()))
+        told, left = _Departure(self.plain, self.name, inner).made()
+        new = replace(entry, bodies=Frozen({**entry.bodies, "of": told.of}))
+        body = tuple([new if e is entry else e for e in self.one.of])
+        return replace(self.one, of=body, before=None), replace(left, last=float(self.past[-1]))
 
     def _replaced(self, new: Sequence[Entry]) -> Iterator[str]:
         """The numbers that stand in the spec for where a term begins, and give way to the record."""
@@ -232,7 +252,7 @@ def _joined(spaces: Sequence[StateSpace]) -> StateSpace:
 
 def _alone(spec: Spec, name: str, one: Series) -> Iterator[str]:
     """What is to be said of parts that are used by themselves, where the past tells only their sum."""
-    opened = any(entry.kind == OPEN and entry.values["row"] for entry in one.of)
+    opened = any(entry.kind == OPEN and entry.values["row"] for entry, _ in walk(one.of))
     bodies = [*(other.of for other in spec.series.values()), *(other.of for other in spec.shared.values())]
     named = [entry.values["name"] for body in bodies for entry, _ in walk(body) if entry.kind == "use"]
     parts = [full for full in dict.fromkeys(named) if full.startswith(f"{name}.")]

@@ -52,7 +52,9 @@ def single(entry: Entry, node: Node, x: Array) -> Told | Unknown:
 
 
 def _own(term: Any) -> str:
-    """How a term is told by itself what a record cannot tell it; nothing where it has no `before`."""
+    """How a term is told what a record cannot tell it: written otherwise, or by itself where it has a `before`."""
+    if getattr(term, "leaves_as", ""):
+        return f", or write it as {term.leaves_as}, which can"
     if not any(p.name == "before" for p in term.parameters):
         return ""
     why = "" if getattr(term, "even", True) else ", whose steps differ in length here,"

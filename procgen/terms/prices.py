@@ -35,6 +35,7 @@ class Brownian(Term):
     example = "geometric_brownian_motion: {drift: {value: 0.08, per: year}, sd: {value: 0.2, per: year}, start: 100}"
     knows = "mean, covariance and lognormal law at any steps; before step 0 it is followed backwards at random"
     correlates = True
+    leaves_as = "exp: [{random_walk: {sd: σ, drift: μ − σ²/2}}]"
     parameters: ClassVar[tuple[Parameter, ...]] = (DRIFT, SD, START)
 
     def __init__(self, values):

@@ -188,7 +188,7 @@ PAST = [3.0, 1.0, 4.0, 1.0, 5.0, 9.0, 2.0, 6.0]
     [
         ([{"constant": 3}], r"nothing in x is random, so its past changes nothing; remove before"),
         ([{"ar": {"phi": 0.5, "sd": 1, "before": {"x": [1]}}}], r"x.ar \(ar\) has a `before` of its own, .* one"),
-        ([{"exp": [AR]}], r"x.exp cannot leave from the past of x: exp cannot be told where it stands; remove before"),
+        ([{"floor": [AR]}], r"x.floor cannot leave from the past of x: floor cannot be told where .*; remove before"),
         (
             [{"stochastic_volatility": {"sd": 1, "phi": 0.9, "eta": 0.2}}],
             r"x.stochastic_volatility cannot leave .* nothing of it is told by its values .* remove before",
