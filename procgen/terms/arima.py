@@ -11,6 +11,7 @@ from procgen.chance.kernel import kernel
 from procgen.spec.declare import Parameter, Real, Reals, Record, Span, Whole
 from procgen.terms.arma import Arma, not_causal
 from procgen.terms.base import LAW, SD, Ahead, Term, Unknown, number, rows, signed, stated, without_gap
+from procgen.terms.rows import alike
 from procgen.terms.start import partial_autocorrelations
 
 
@@ -66,7 +67,7 @@ class Integrated(Term):
             return x[len(x) - before.head :], state
         self.core.shock_scale = self.shock_scale
         w, core = self.core.begin(before)
-        state = {"x": rows(self.known[:-1]), "w": core["x"], "a": core["a"]}
+        state = {"x": _rows(self.known[:-1]), "w": core["x"], "a": core["a"]}
         if not n:
             return w + self.level, state
         if not before.head:
@@ -85,7 +86,7 @@ class Integrated(Term):
 
     def _backwards(self, w, head):
         """Values at steps −head … −1 from w at steps 0, −1, …"""
-        n, x = len(self.delta), [np.full(w[0].shape, float(v)) for v in self.known[::-1]]
+        n, x = len(self.delta), [np.full(w[0].shape, v) for v in self.known[::-1]]
         for k in range(head - n + 1):
             v = x[k] - (w[k] + self.level)
             for i, c in enumerate(self.delta[:-1], start=1):
@@ -107,7 +108,7 @@ class Integrated(Term):
         n, w, past = len(self.delta), w + self.level, state["x"]
         first = len(past) < n  # step 0 is the last of the known values
         if first:
-            past, w = rows(self.known), w[1:]
+            past, w = _rows(self.known), w[1:]
         x = np.empty((n + len(w), w.shape[1] if n == 0 else max(w.shape[1], past.shape[1])))
         x[:n] = past
         back = [i for i, c in enumerate(self.delta, start=1) if c]
@@ -158,6 +159,8 @@ class Arima(Integrated):
     source = "Box & Jenkins (1970), ch. 4 and 9; regression signs"
     example = "arima: {d: 1, theta: -0.4, seasonal: {period: 4, d: 1, theta: -0.3}, sd: 0.037}"
     knows = "mean and covariance at any steps; Gaussian law for normal shocks"
+    by_rows = ("phi", "theta", "drift", "start", "sd")
+    begins_by_rows = True
     parameters: ClassVar[tuple[Parameter, ...]] = (
         Parameter("phi", "φ", Reals(), "coefficients of w[t−1], w[t−2], …, w the differenced series", default=()),
         Parameter("d", "d", Whole(at_least=0, at_most=4), "how often the differences 1 − B are taken"),
@@ -231,8 +234,8 @@ class Arima(Integrated):
         super().__init__(values)
         phi, theta, self.delta = self._parts(values)
         self.core = Arma({"phi": phi, "theta": theta, "sd": 1.0, "total_sd": None, "before": None})
-        self.level = float(self.drift)
-        self.known = filled(self.start, len(self.delta))
+        self.level = self.drift
+        self.known = alike(filled(self.start, len(self.delta)))
 
     @property
     def period(self):
@@ -308,6 +311,11 @@ def filled(start, count):
     return start if len(start) == count else start[:1] * count
 
 
+def _rows(values):
+    """Numbers as one deterministic column, or as one a path where they are rows."""
+    return np.array(values, dtype=np.float64).reshape(len(values), -1) if values else rows(values)
+
+
 def _ar(phi):
     return (1.0, *(-c for c in phi))
 
@@ -324,7 +332,7 @@ def _times(a, b):
     out = [0.0] * (len(a) + len(b) - 1)
     for i, x in enumerate(a):
         for j, y in enumerate(b):
-            if x and y:
+            if np.any(x) and np.any(y):
                 out[i + j] = out[i + j] + x * y
     return tuple(out)
 

@@ -34,6 +34,25 @@ BODIES = {
     "ar of three": [{"ar": {"phi": [drawn(-0.3, 0.5), 0.0, drawn(-0.4, 0.4)], "total_sd": drawn(1, 2)}}],
     "ar of few values": [{"ar": {"phi": {"draw": {"choice": [0.0, 0.5]}, "over": "path"}, "sd": 1.0}}],
     "arma far back": [lagged(5, {"arma": {"phi": drawn(0.1, 0.5), "theta": [drawn(0.1, 0.4), 0.2], "sd": 1.5}})],
+    "integrated": [
+        lagged(3, {"arima": {"d": 1, "phi": [drawn(0.1, 0.5), 0.0, drawn(-0.3, 0.3)], "theta": drawn(-0.3, 0.3),
+                             "drift": drawn(-1, 1), "start": drawn(5, 9), "sd": drawn(1, 2)}})
+    ],
+    "integrated by season": [
+        lagged(7, {"arima": {"d": 1, "theta": drawn(-0.4, 0.4), "seasonal": {"period": 4, "d": 1, "theta": -0.3},
+                             "start": [1.0, drawn(2, 3), 3.0, 4.0, 5.0], "sd": 0.5}})
+    ],
+    "integrated of some zeros": [
+        {"arima": {"d": 1, "phi": {"draw": {"choice": [0.0, 0.5]}, "over": "path"}, "sd": 1.0,
+                   "seasonal": {"period": 3, "phi": [0.3, 0.0, 0.1]}}}
+    ],
+    "integrated, burning in": [
+        lagged(2, {"arima": {"d": 2, "phi": drawn(0.1, 0.5), "theta": 0.2, "sd": drawn(1, 2), "law": STUDENT}})
+    ],
+    "integrated from a past": [
+        {"arima": {"d": 1, "phi": drawn(0.1, 0.5), "sd": 1.0, "drift": drawn(0, 1), "before": {"x": [1.0, 3.0]}}}
+    ],
+    "differenced 0 times": [{"arima": {"d": 0, "phi": 0.5, "drift": drawn(0, 1), "sd": drawn(1, 2)}}],
     "arma": [{"arma": {"phi": [0.5, drawn(-0.3, 0.3)], "theta": 0.3, "total_sd": drawn(1, 3)}}],
     "ma not normal": [lagged(2, {"ma": {"theta": [drawn(0.1, 0.5), 0.2], "sd": drawn(1, 2), "law": STUDENT}})],
     "ar not normal": [{"ar": {"phi": [0.5, 0.2], "sd": drawn(1, 2), "law": STUDENT}}],
@@ -96,6 +115,7 @@ BODIES = {
 }  # fmt: skip
 TIED = {
     "linear": ({"ar": AR}, {"arma": {"phi": 0.3, "theta": drawn(0.1, 0.5), "sd": 2.0}}),
+    "integrated": ({"arima": {"d": 1, "phi": drawn(0.1, 0.5), "sd": drawn(1, 2)}}, {"ar": AR}),
     "far back": (lagged(4, {"ar": AR}), {"ar": {"phi": [0.3, 0.2], "sd": 2.0}}),
     "garch": (GARCH, {"white_noise": {"sd": drawn(1, 2)}}),
 }  # fmt: skip
