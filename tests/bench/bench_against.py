@@ -40,7 +40,7 @@ SPECS = {
 }
 CORRELATION = f"correlation:\n  - {{within: [{', '.join(f'x{k}.ar' for k in range(20))}], value: 0.35}}\n"
 # Each draws a mapping of (paths, steps) arrays with 500 steps of burn-in where the process has a memory.
-DRAW = '''\
+DRAW = """\
 import numpy as np
 from scipy.signal import lfilter
 
@@ -86,7 +86,7 @@ def draw(case, rng, paths, steps):
     shocks = rng.standard_normal((20, paths, BURN + steps))
     shocks = np.tensordot(root, shocks, axes=1)
     return {f"x{k}": lfilter([1.0], [1.0, -0.5], shocks[k], axis=1)[:, BURN:] for k in range(20)}
-'''
+"""
 BY_HAND = """\
 import pandas as pd
 
