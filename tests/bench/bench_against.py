@@ -7,11 +7,16 @@ To Parquet, whole processes, rounds interleaved, medians of the ratios round by 
 - `by hand`: NumPy draws and filters all paths at once, pandas writes the frame with `to_parquet`;
 - `expert`: the same filters on blocks of about a million rows with NumPy's fastest generator, written by pyarrow
   without dictionary, statistics or compression, from memory that is never copied;
-- `procgen`: `procgen render` with two workers, digests included.
+- `procgen`: `procgen render` with two workers, digests included;
+- `floor`, beside the walk: what cannot be beaten without drawing less, as in `bench_walk`, by two processes.
+
+Scripts would take minutes and many GB for a million paths, most of it for their burn-in. Where one would draw more
+than MOST_HERE values it draws fewer paths, and what it takes above its start is multiplied; the table says by how much.
+Both scripts take time in proportion to paths, and lose nothing by having fewer.
 
 In memory, the call alone: `statsmodels` (`arma_generate_sample`; `simulate` of its state space model) and `arch`
-(`simulate`) against `render(out=None)`. What is drawn path by path there is timed on few paths and multiplied; the
-table says so.
+(`simulate`) against `render(out=None)`, which draws in as many threads as there are processors. These too are timed on
+fewer paths and multiplied, as the table says.
 """
 
 from __future__ import annotations
@@ -25,10 +30,12 @@ import subprocess
 import sys
 from pathlib import Path
 
-from tests.bench.bench_walk import Run, measure, ratio
+from tests.bench.bench_walk import FLOOR, Run, measure, ratio
 
 SHAPES = ((1, 1_000_000), (100, 100_000), (65_536, 1_000), (1_000_000, 50))
 MOST = 70_000_000  # values of a case; of 20 series there are fewer paths
+MOST_HERE = {"by hand": 16_000_000, "expert": 32_000_000, "memory": 16_000_000}  # values drawn, by who draws them
+BURN = 500  # steps that the scripts draw before the first, where the process has a memory
 SPECS = {
     "noise": "{x: [{white_noise: {sd: 1}}]}",
     "walk": "{x: [{random_walk: {sd: 1}}]}",
@@ -125,6 +132,7 @@ with pq.ParquetWriter("{out}/expert.parquet", schema, **options) as writer:
         columns += [column(values, pa.float64()) for values in series.values()]
         writer.write_table(pa.table(columns, schema=schema), row_group_size=1 << 20)
 """
+SCRIPTS = {"by hand": BY_HAND, "expert": EXPERT}
 SPEC = "procgen: 1\nseed: 1\npaths: {paths}\ntime: {{steps: {steps}}}\nseries: {series}\n"
 # Seconds of each call, one a line, after one call of the same on little.
 IN_MEMORY = """\
@@ -182,9 +190,10 @@ def main() -> None:
     args.dir = args.dir.absolute()
     args.dir.mkdir(parents=True, exist_ok=True)
     print(f"{os.cpu_count()} processors, Python {platform.python_version()}, median of {args.rounds} rounds")
-    print(f"extra speed (numba) {'present' if importlib.util.find_spec('numba') else 'absent'}\n")
-    print("| case | shape | procgen s | by hand s | expert s | by hand / procgen | expert / procgen | peak MB |")
-    print("| --- | --- | --- | --- | --- | --- | --- | --- |")
+    print(f"extra speed (numba) {'present' if importlib.util.find_spec('numba') else 'absent'}, {instructions()}\n")
+    heads = ("case", "shape", "procgen s", "by hand s", "expert s", "by hand / procgen", "expert / procgen")
+    print(f"| {' | '.join((*heads, 'procgen / floor', 'peak MB', 'multiplied'))} |")
+    print("| --- " * (len(heads) + 3) + "|")
     for case in args.only:
         for shape in args.shapes:
             print(written(case, few_paths(case, shape), args.rounds, args.dir), flush=True)
@@ -228,29 +237,70 @@ def spec_file(folder: Path, case: str, shape: tuple[int, int]) -> Path:
     return file
 
 
+def instructions() -> str:
+    """Whether the processor has instructions for SHA-256, which digests are made with."""
+    try:
+        words = Path("/proc/cpuinfo").read_text(encoding="ascii").split()
+    except OSError:
+        return "SHA instructions not known"
+    return f"SHA instructions {'present' if {'sha_ni', 'sha2'} & {*words} else 'absent'}"
+
+
+def drawn_by(who: str, case: str, shape: tuple[int, int]) -> int:
+    """How many of the paths a rival draws."""
+    steps = shape[1] + (0 if case in ("noise", "walk") else BURN)
+    values = steps * {"sum of 5": 3, "20 series": 20}.get(case, 1)
+    return max(min(shape[0], MOST_HERE[who] // values), 1)
+
+
+class Script:
+    """What somebody would write instead, run on some of the paths."""
+
+    def __init__(self, who: str, case: str, shape: tuple[int, int], folder: Path) -> None:
+        self.few, self.file, self.out = (
+            drawn_by(who, case, shape),
+            folder / f"{who.replace(' ', '_')}.py",
+            folder / "out",
+        )
+        self.times, self.start = shape[0] / self.few, 0.0
+        for paths in (1, self.few) if self.times > 1 else (self.few,):
+            text = SCRIPTS[who].format(case=case, paths=paths, steps=shape[1], out=self.out)
+            self.file.write_text(f"{DRAW}\n\n{text}")
+            if paths < self.few:
+                self.start = min(measure([str(self.file)], self.out).seconds for _ in range(3))
+
+    def run(self) -> Run:
+        """One run, as long as it would take for all paths; the peak is that of the few."""
+        run = measure([str(self.file)], self.out)
+        return run._replace(seconds=self.start + (run.seconds - self.start) * self.times)
+
+
 def written(case: str, shape: tuple[int, int], rounds: int, folder: Path) -> str:
     """A row of the first table."""
-    out = folder / "out"
-    spec = spec_file(folder, case, shape)
-    commands = {"procgen": ["-m", "procgen", "render", str(spec), "-o", str(out), "--workers", "2"]}
-    for name, script in {"by hand": BY_HAND, "expert": EXPERT}.items():
-        file = folder / f"{name.replace(' ', '_')}.py"
-        file.write_text(DRAW + "\n\n" + script.format(case=case, paths=shape[0], steps=shape[1], out=out))
-        commands[name] = [str(file)]
-    seen: dict[str, list[Run]] = {name: [] for name in commands}
+    out, floor = folder / "out", folder / "floor.py"
+    ours = ["-m", "procgen", "render", str(spec_file(folder, case, shape)), "-o", str(out), "--workers", "2"]
+    scripts = {who: Script(who, case, shape, folder) for who in SCRIPTS}
+    floor.write_text(FLOOR.format(paths=shape[0], steps=shape[1], out=out))
+    seen: dict[str, list[Run]] = {name: [] for name in ("procgen", *scripts, "floor")}
     for _ in range(rounds):
-        for name, command in commands.items():
-            seen[name].append(measure(command, out))
-    times = [f"{statistics.median(run.seconds for run in runs):.2f}" for runs in seen.values()]
-    ratios = [f"{ratio(seen[name], seen['procgen']):.2f}" for name in ("by hand", "expert")]
-    peaks = " / ".join(f"{max(run.peak for run in runs):.0f}" for runs in seen.values())
-    return f"| {case} | {shape[0]:,} × {shape[1]:,} | {' | '.join(times + ratios)} | {peaks} |"
+        seen["procgen"].append(measure(ours, out))
+        for who, script in scripts.items():
+            seen[who].append(script.run())
+        if case == "walk" and shape[0] > 1:
+            seen["floor"].append(measure([str(floor)], out))
+    rivals = ("procgen", *scripts)
+    times = [f"{statistics.median(run.seconds for run in seen[name]):.2f}" for name in rivals]
+    ratios = [f"{ratio(seen[name], seen['procgen']):.2f}" for name in scripts]
+    ratios.append(f"{ratio(seen['procgen'], seen['floor']):.2f}" if seen["floor"] else "")
+    peaks = " / ".join(f"{max(run.peak for run in seen[name]):.0f}" for name in rivals)
+    scaled = ", ".join(f"{who} × {script.times:.1f}" for who, script in scripts.items() if script.times > 1)
+    return f"| {case} | {shape[0]:,} × {shape[1]:,} | {' | '.join(times + ratios)} | {peaks} | {scaled} |"
 
 
 def in_memory(case: str, call: str, shape: tuple[int, int], rounds: int, folder: Path) -> str:
     """A row of the second table."""
     paths, steps = shape
-    few = paths if call == "generated" else max(min(paths, 200_000 // steps), 1)
+    few = drawn_by("memory", case, shape) if call == "generated" else max(min(paths, 200_000 // steps, 500), 1)
     times = paths / few if few < paths else 1
     spec = str(spec_file(folder, case, shape))
     ours, theirs = [], []

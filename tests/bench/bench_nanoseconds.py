@@ -133,8 +133,7 @@ def stages(case: str, paths: int, compiled: bool) -> dict[str, float]:
                 clock("write", lambda out=out, batch=batch: writer.write(batch, out))
     for part in ("index columns", "encode index", "encode values"):
         clock.seconds["write"] -= clock.seconds[part]
-    clock.seconds["write"] = max(clock.seconds["write"], 0.0)
-    return clock.seconds
+    return {stage: max(seconds, 0.0) for stage, seconds in clock.seconds.items()}
 
 
 def drawn(clock: Clock, source: SpecSource, case: str, batch: Block, out: dict[str, np.ndarray], most: int) -> None:
