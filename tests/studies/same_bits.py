@@ -11,7 +11,7 @@ Ends with 1 where anything differs. In a checkout that nobody edits meanwhile: e
 The oldest versions that pyproject.toml allows:
 
     python3.11 -m venv OLD
-    OLD/bin/pip install numpy==1.26.0 scipy==1.11.1 PyYAML==6.0.1 pandas==2.1.0 pyarrow==17.0.0 typer==0.12.5 \\
+    OLD/bin/pip install numpy==1.26.0 scipy==1.12.0 PyYAML==6.0.1 pandas==2.1.0 pyarrow==17.0.0 typer==0.12.5 \\
         tzdata==2024.1
     python -m tests.studies.same_bits --python OLD/bin/python
 
