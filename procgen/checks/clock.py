@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import re
+import warnings
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -47,10 +48,7 @@ class Times:
         found = pd.Series(texts)
         if found.dtype == object or pd.api.types.is_string_dtype(found):
             self._refuse_day_first(found, codes)
-        try:
-            times = pd.to_datetime(found, errors="coerce", format="mixed")
-        except ValueError:  # offsets that differ, as across a change of clocks
-            times = pd.to_datetime(found, errors="coerce", utc=True, format="mixed")
+        times = _times(found)
         if times.isna().any():
             row = int(np.argmax(times.isna().to_numpy()[codes]))
             value = column.iloc[row]
@@ -95,6 +93,21 @@ def refuse_numbers(column: pd.Series) -> None:
                 f"validate the DataFrame, or write times as text such as {at}"
             )
     raise NoTime(f"{first} in row 0 of {column.name} is a number, not a time{looks}")
+
+
+def _times(found: pd.Series) -> pd.Series:
+    """Points in time, or NaT; in UTC where offsets differ, as across a change of clocks."""
+    import pandas as pd
+
+    try:
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore", FutureWarning)  # of pandas 2, which gives objects where pandas 3 raises
+            times = pd.to_datetime(found, errors="coerce", format="mixed")
+        if times.dtype != object:
+            return times
+    except ValueError:
+        pass
+    return pd.to_datetime(found, errors="coerce", utc=True, format="mixed")
 
 
 def _microseconds(times: pd.Series) -> NDArray[np.int64]:
