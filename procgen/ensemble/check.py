@@ -99,6 +99,8 @@ class DigestResult:
             lines.append("as expected" if same else self.departure or f"expected {self.expected}: other values")
         if self.difference is not None:
             lines.append(f"first difference: {self.difference}")
+        elif self.redrawn and self.digest is None:
+            lines.append("drawn again, and nothing to compare with: what is damaged cannot be read")
         elif self.redrawn:
             paths = sum(block.paths for block in self.redrawn)
             lines.append(f"drawn again: {paths} paths, all the same bits")
@@ -230,7 +232,7 @@ class Reader:
         yield from parquet.read(self.path, part.file, part.block, layout, self.columns, self.stamps, first, end)
 
     def _compare(self, part: PartRecord, nodes: Mapping[str, Mapping[digest.Key, bytes]]) -> list[Damage]:
-        """At most one damage: the first series and rectangle whose values are not those that were written."""
+        """The first series and rectangle whose values are not those that were written, and whose else they may be."""
         mine = {name: digest.pack(each) for name, each in nodes.items()}
         if node(mine) == part.node:
             return self._identity(part)
@@ -241,7 +243,7 @@ class Reader:
                 if nodes[name][key] != theirs[key]:
                     area = digest.area(key, part.block, self.manifest.whole)
                     return [Damage(part.file, f"series {name} has other values in {area}", name, area)]
-        return [Damage(part.file, "it has other values than the manifest says")]
+        return [Damage(part.file, "it has other values than the manifest says"), *self._identity(part)]
 
     def _identity(self, part: PartRecord) -> list[Damage]:
         """Whether a part says that it is of another ensemble; of a manifest that was changed, that is its fault."""

@@ -110,9 +110,11 @@ class Present:
         found: dict[Block, dict[str, Any]] = {}
         there, listed = set(self.folder.part_files()), self._listed()
         for part in (part for chain in chains for part in chain):
+            if part.file(self.whole) in self.damaged:  # drawn again, whatever it says of itself
+                continue
             footers = [self._footer(file, listed) for file in self._files(part) if file in there]
             mine = [nodes for said, nodes in filter(None, footers) if said.get("part") == asdict(part)]
-            if len(mine) == len(self._files(part)) and part.file(self.whole) not in self.damaged:
+            if len(mine) == len(self._files(part)):
                 size = self.folder.sizes(self._files(part))
                 found[part] = {"part": asdict(part), "bytes": size, "nodes": files.together(mine)}
         return found
