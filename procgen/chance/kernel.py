@@ -219,13 +219,18 @@ def _function(text: str, name: str) -> Callable:
 
 
 @cache
-def machine(module: str, function: str) -> Machine:
-    """A function of a module of this room that imports numba, which is imported only where it is not compiled yet."""
-    here = Path(__file__).parent
-    text = "".join([file.read_text(encoding="utf-8") for file in sorted(here.glob("*.py"))])
+def machine(module: str, function: str, room: str = __package__) -> Machine:
+    """A function of a module that imports numba, which is imported only where it is not compiled yet.
+
+    The module may depend on this room alone.
+    """
+    files = sorted(Path(__file__).parent.glob("*.py"))
+    if room != __package__:
+        files.append(Path(import_module(room).__path__[0]) / f"{module}.py")
+    text = "".join([file.read_text(encoding="utf-8") for file in files])
 
     def given() -> Callable:
-        return getattr(import_module(f"{__package__}.{module}"), function)
+        return getattr(import_module(f"{room}.{module}"), function)
 
     return Machine(f"{module}.{function}", text, given, cache_folder)
 

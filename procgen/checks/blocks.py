@@ -9,11 +9,12 @@ from __future__ import annotations
 
 import threading
 from collections.abc import Sequence
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from procgen.chance.kernel import is_compiling
+from procgen.chance.kernel import is_compiling, machine
 
 BLOCK = 64  # steps
 GROUP = 16  # paths: a lane group of the ensemble, the finest cut between two parts
@@ -33,6 +34,11 @@ def scratch(steps: int, paths: int, number: int = 0) -> NDArray:
 def compiled(paths: int) -> bool:
     """Whether tiles of so many paths go through compiled passes."""
     return is_compiling() and paths >= WIDE
+
+
+def in_one_pass(name: str, *args: Any) -> None:
+    """Call a function of `fused`, by its name: machine code that fills arrays."""
+    machine("fused", name, __package__)(*args)
 
 
 def across(x: NDArray) -> NDArray:
@@ -63,10 +69,8 @@ def add_products(total: NDArray, a: NDArray, b: NDArray | None = None, offset: i
 def _summed(total: NDArray, factors: Sequence[NDArray], offset: int) -> NDArray:
     steps, paths = factors[0].shape
     if compiled(paths) and all(x.flags.c_contiguous for x in factors):
-        from procgen.checks import fused
-
         new = total.copy()
-        fused.add_products(new, factors[0], factors[-1], len(factors) > 1, offset)
+        in_one_pass("add_products", new, factors[0], factors[-1], len(factors) - 1, offset, np.empty(paths))
         return new
     head = min(-offset % BLOCK, steps)
     middle = head + (steps - head) // BLOCK * BLOCK

@@ -16,7 +16,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from procgen.checks.blocks import compiled
+from procgen.checks.blocks import compiled, in_one_pass
 from procgen.checks.verdict import Check
 
 STUCK, COPIED = "values that stay", "copied stretches"
@@ -158,13 +158,13 @@ class Watch:
         self.step += len(x)
 
     def _compiled(self, x: NDArray) -> None:
-        from procgen.checks import fused
-
-        some = np.empty(len(x), dtype=bool)
-        fused.stays(self.before, x, some)
-        self._follow(x, some)
+        some, paths = np.empty(len(x), dtype=np.int64), x.shape[1]
+        in_one_pass("stays", self.before, x, some)
+        self._follow(x, some > 0)
         room = Marks(*(np.empty(x.size, each.dtype) for each in self.marks.arrays))
-        count = fused.marked(self.before, x, self.ends, _MIX, *room.arrays)
+        mixed, where, counted = np.empty((3, paths), np.uint64), np.empty(paths, np.int64), np.empty(1, np.int64)
+        in_one_pass("marked", self.before, x, self.ends, _MIX, *room.arrays, mixed, where, counted)
+        count = int(counted[0])
         path, step = self.first_path + room.paths[:count], self.step + room.steps[:count]
         self._keep(Marks(room.hashes[:count].copy(), room.values[:count].copy(), path, step))
 

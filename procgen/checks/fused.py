@@ -1,10 +1,13 @@
 """What `shocks`, `structure` and `copies` do with a tile, compiled: each in one pass instead of dozens.
 
-Imported only where kernels are compiled (numba, the extra `speed`), for tiles (steps, paths) of finite values in one
-piece of memory. Every sum adds the same numbers in the same order as the plain form, so that the bits are the same.
+Called by `blocks.in_one_pass`, for tiles (steps, paths) of finite values in one piece of memory; imported only where
+there is no machine code yet (numba, the extra `speed`). Every sum adds the same numbers in the same order as the plain
+form, so that the bits are the same. What is written is passed: memory is got outside.
 """
 
 from __future__ import annotations
+
+from functools import partial
 
 import numpy as np
 
@@ -12,19 +15,17 @@ from procgen.chance.kernel import compiled_function
 
 BLOCK, STRETCH = 64, 16  # steps, as in `blocks` and `stretches`
 _SIZE = np.int64(2**63 - 1)  # all bits of a double but its sign
-_ENDLESS = np.int64(0x7FF0000000000000)  # the bits of infinity
 _STEEP, _FALL = 6 * np.sqrt(5.0), 0.5 * np.sqrt(5.0)  # of `cluster_scores`
+_part = partial(compiled_function, inline="always")
 
 
-@compiled_function
-def scored(g, left, scale, counts, clusters, worst):
+def scored(g, left, scale, counts, clusters, worst, u):
     """Of scores g: their uniforms, counted in bins; cluster scores; and the size of the farthest of each step.
 
-    left: the table of uniforms and its last entry again; scale: cells for one sd.
+    left: the table of uniforms and its last entry again; scale: cells for one sd; u: room for a row.
     """
     steps, paths = g.shape
     cells, bins = float(left.shape[0] - 2), counts.shape[0]
-    u = np.empty(paths)
     for t in range(steps):
         row, out, bits = g[t], clusters[t], g[t].view(np.int64)
         far = np.int64(0)
@@ -41,15 +42,13 @@ def scored(g, left, scale, counts, clusters, worst):
         worst[t] = far
 
 
-@compiled_function
-def summed(g, clusters, steps, lags, cluster_lags, totals, beside, profile, short):
+def summed(g, clusters, steps, lags, cluster_lags, totals, beside, profile, short, block, rest):
     """Add products along paths and across them to totals, beside; fill sums by step and by stretch of 16 steps.
 
     g, clusters (held + steps, paths): views of windows. totals: of g, g², two that are left alone, asymmetry, another
-    such, then by lag.
+    such, then by lag. block, rest: room for one row and for two.
     """
     held, held_too, paths = g.shape[0] - steps, clusters.shape[0] - steps, g.shape[1]
-    block, rest = np.empty(paths), np.empty(2 * paths + BLOCK)
     for first in range(0, steps, BLOCK):
         end = min(first + BLOCK, steps)
         _add(totals[0], g[held + first : held + end], block)
@@ -60,7 +59,8 @@ def summed(g, clusters, steps, lags, cluster_lags, totals, beside, profile, shor
         at = 6 + lags.shape[0]
         for k in range(cluster_lags.shape[0]):
             _add_products(totals[at + k], clusters, held_too, clusters, held_too - cluster_lags[k], first, end, block)
-        block[: paths - 1] = 0.0
+        for p in range(paths - 1):
+            block[p] = 0.0
         for t in range(held + first, held + end):
             right, left = g[t][1:], g[t]
             for p in range(paths - 1):
@@ -77,22 +77,18 @@ def summed(g, clusters, steps, lags, cluster_lags, totals, beside, profile, shor
         _halved(g[held + STRETCH * k : held + STRETCH * (k + 1)], short[k])
 
 
-@compiled_function
-def plain_sums(z, totals):
+def plain_sums(z, totals, block):
     """Add z and z² along paths to the third and fourth of the totals."""
-    steps, paths = z.shape
-    block = np.empty(paths)
+    steps = z.shape[0]
     for first in range(0, steps, BLOCK):
         end = min(first + BLOCK, steps)
         _add(totals[2], z[first:end], block)
         _add_products(totals[3], z, 0, z, 0, first, end, block)
 
 
-@compiled_function
-def add_products(total, a, b, both, offset):
+def add_products(total, a, b, both, offset, block):
     """Add a·b (or a, unless `both`) to total, in blocks, where the rows begin `offset` steps after a block."""
     steps, first = a.shape[0], 0
-    block = np.empty(total.shape[0])
     while first < steps:
         end = min(first + BLOCK - (first + offset) % BLOCK, steps)
         if both:
@@ -102,10 +98,11 @@ def add_products(total, a, b, both, offset):
         first = end
 
 
-@compiled_function
+@_part
 def _add(total, rows, block):
     paths = total.shape[0]
-    block[:] = 0.0
+    for p in range(paths):
+        block[p] = 0.0
     for t in range(rows.shape[0]):
         row = rows[t]
         for p in range(paths):
@@ -114,11 +111,12 @@ def _add(total, rows, block):
         total[p] += block[p]
 
 
-@compiled_function
+@_part
 def _add_products(total, a, at, b, bt, first, end, block):
     """Add a·b, where both are there, summed over the steps of a block; those of step 0 are a[at], b[bt]."""
     paths = total.shape[0]
-    block[:] = 0.0
+    for p in range(paths):
+        block[p] = 0.0
     for t in range(max(first, -bt), end):
         x, y = a[at + t], b[bt + t]
         for p in range(paths):
@@ -127,7 +125,7 @@ def _add_products(total, a, at, b, bt, first, end, block):
         total[p] += block[p]
 
 
-@compiled_function
+@_part
 def _across(row, rest):
     """Sum over a row, neighbours first; `rest` has room for twice the row."""
     n, at, x = row.shape[0], 0, row
@@ -142,7 +140,7 @@ def _across(row, rest):
     return x[0]
 
 
-@compiled_function
+@_part
 def _halved(rows, out):
     """Sums of sixteen rows, neighbours first."""
     for p in range(out.shape[0]):
@@ -155,11 +153,9 @@ def _halved(rows, out):
         )
 
 
-@compiled_function
 def looked(x, weights, prints, low, high, zeros):
-    """Add the fingerprints of values x to prints, fill extremes and zeros of each step; whether all are finite."""
+    """Add the fingerprints of values x to prints; fill the bits of the extremes of each step, and its zeros."""
     steps, paths = x.shape
-    finite = True
     for t in range(steps):
         bits, signed = x[t].view(np.uint64), x[t].view(np.int64)
         least, most, none = _SIZE, -_SIZE, 0
@@ -168,29 +164,27 @@ def looked(x, weights, prints, low, high, zeros):
             prints[p] += (bits[p] ^ (bits[p] >> np.uint64(32))) * weights[t]
             key = signed[p] ^ ((signed[p] >> 63) & _SIZE)  # ordered as the values are
             least, most = min(least, key), max(most, key)
-        finite = finite and most < _ENDLESS and least > ~_ENDLESS
         zeros[t] = none
         low[t], high[t] = least ^ ((least >> 63) & _SIZE), most ^ ((most >> 63) & _SIZE)
-    return finite
 
 
-@compiled_function
 def stays(before, x, some):
-    """For each step of x, whether some path has the value of the step before; `before` are the rows before x."""
+    """For each step of x, how many paths have the value of the step before; `before` are the rows before x."""
     last = before[before.shape[0] - 1]
     for t in range(x.shape[0]):
         row, same = x[t], 0
         for p in range(x.shape[1]):
             same += row[p] == last[p]
-        some[t] = same > 0
+        some[t] = same
         last = row
 
 
-@compiled_function
-def marked(before, x, ends, mix, hashes, values, paths, steps):
-    """Fill in the marks of stretches that end in x; how many there are. `before`: the rows of a stretch before x."""
+def marked(before, x, ends, mix, hashes, values, paths, steps, mixed, where, found_in_all):
+    """Fill in the marks of stretches that end in x, and how many there are; `before`: the rows of a stretch before x.
+
+    mixed, where: room for three rows and for one.
+    """
     reach, lanes, count = before.shape[0], x.shape[1], 0
-    mixed, where = np.empty((3, lanes), np.uint64), np.empty(lanes, np.int64)
     for t in range(-2, x.shape[0]):
         bits = (x[t] if t >= 0 else before[reach + t]).view(np.uint64)
         one, two, three = mixed[t % 3], mixed[(t - 1) % 3], mixed[(t - 2) % 3]
@@ -215,4 +209,4 @@ def marked(before, x, ends, mix, hashes, values, paths, steps):
             if known:
                 hashes[count], values[count], paths[count], steps[count] = total, x[t, p], p, t
                 count += 1
-    return count
+    found_in_all[0] = count

@@ -25,15 +25,24 @@ from procgen.checks.tree import Tree, ranges
 from procgen.ensemble.plan import Block
 
 TILE = 1 << 16  # values of one series in a tile: half of a second-level cache
-COMPILING_REPAYS = 40_000_000  # values of one process, 15 to 25 ns each; loading what is compiled takes half a second
+COMPILING_REPAYS = 40_000_000  # values of one process, 15 to 25 ns each: to compile, which pays next time
+LOADING_REPAYS = 4_000_000  # the same where there is machine code, which is loaded in 0.06 s
 
 Tick = Callable[[int], None]  # rows just summed; may raise to stop the work
 Progress = Callable[[int, int], None]  # rows done, rows in all
 
 
 def repays(values: int) -> bool:
-    """Whether compiling repays for so many values of one process."""
-    return values > COMPILING_REPAYS
+    """Whether compiled passes repay for so many values of one process."""
+    if values <= LOADING_REPAYS or not kernel.available():
+        return False
+    return values > COMPILING_REPAYS or are_kept()
+
+
+def are_kept() -> bool:
+    """Whether the pass that nearly all data need is kept as machine code here."""
+    tile, row, counts = np.empty((0, 0)), np.empty(0), np.empty(0, dtype=np.int64)
+    return kernel.machine("fused", "scored", __package__).is_kept(tile, row, 1.0, counts, tile, counts, row)
 
 
 class Lane:

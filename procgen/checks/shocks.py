@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.checks import apart, farthest
-from procgen.checks.blocks import GROUP, Window, across, add_lagged, add_products, compiled, scratch
+from procgen.checks.blocks import BLOCK, GROUP, Window, across, add_lagged, add_products, compiled, in_one_pass, scratch
 from procgen.checks.scores import BINS, Scores, cluster_scores
 from procgen.checks.stretches import LENGTHS, StretchLane, StretchSums
 from procgen.checks.uniforms import bin_counts, uniforms
@@ -136,7 +136,6 @@ class ShockSums:
 
     def _compiled(self, z: NDArray, g: NDArray, first_step: int, lane: ShockLane, x: NDArray) -> None:
         """The same as the rest of `absorb`, where all shocks are known, in fewer passes."""
-        from procgen.checks import fused
         from procgen.checks.uniforms import CELLS_OF_SD, lefts
 
         steps, paths = g.shape
@@ -144,12 +143,13 @@ class ShockSums:
         lane.sizes = clusters
         g = lane.view[len(lane.view) - steps :]
         worst, sums = np.empty(steps, np.int64), np.empty((2, steps))
-        short = np.empty((steps // LENGTHS[0], paths))
-        fused.scored(g, lefts(), CELLS_OF_SD, self.counts, clusters[len(clusters) - steps :], worst)
+        short, room = np.empty((steps // LENGTHS[0], paths)), (np.empty(paths), np.empty(2 * paths + BLOCK))
+        new = clusters[len(clusters) - steps :]
+        in_one_pass("scored", g, lefts(), CELLS_OF_SD, self.counts, new, worst, room[0])
         both = np.array(self.lags), np.array(CLUSTER_LAGS)
-        fused.summed(lane.view, clusters, steps, *both, lane.totals, lane.beside, sums, short)
+        in_one_pass("summed", lane.view, clusters, steps, *both, lane.totals, lane.beside, sums, short, *room)
         if not self.scores.gaussian:
-            fused.plain_sums(np.ascontiguousarray(z), lane.totals)
+            in_one_pass("plain_sums", np.ascontiguousarray(z), lane.totals, room[0])
         for row, lags, held in ((self.memory[0], self.lags, lane.view), (self.cluster[0], CLUSTER_LAGS, clusters)):
             row += [paths * max(min(steps, len(held) - lag), 0) for lag in lags]
         self.asymmetry[0] += paths * min(steps, len(lane.view) - 1)

@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.checks import copies, extremes, support
-from procgen.checks.blocks import compiled
+from procgen.checks.blocks import compiled, in_one_pass
 from procgen.checks.verdict import Check
 from procgen.checks.words import many, number
 
@@ -23,7 +23,6 @@ _MOST = 0.9  # share of values that must be rounded
 _CERTAIN = 1e-12  # expected number of equal pairs below which one equal pair is no chance
 _WHOLE = 2.0**40  # size beyond which a number may have no digits after the point without being rounded
 ZEROS, _FILLED = "values that are 0", 4  # so many zeros are no chance where each of them is a rarity
-_ENDS = np.fmin, np.fmax
 _BEGUN = 16  # zeros of earlier steps may say that values begin late, which is another fault, or that they begin at 0
 _RARITY = _CERTAIN ** (1 / _FILLED)  # expected zeros, at most
 
@@ -94,7 +93,7 @@ class Structure:
             for k, count in enumerate((fits, whole, sample.size, half, *grids)):
                 seen[k] += count
             if sample.size:
-                ends_here = [float(end.reduce(sample, None)) for end in _ENDS]
+                ends_here = [float(np.fmin.reduce(sample, None)), float(np.fmax.reduce(sample, None))]
                 self.ends[what.name] = _wider(self.ends.get(what.name), ends_here)
         if what.reach is not None:
             self.far[what.name] = what.reach.farthest(x, first_path, first_step, self.far.get(what.name, ()), ends)
@@ -318,7 +317,7 @@ def _equal(prints: NDArray, paths: NDArray) -> tuple[int, int, int]:
 
 
 def _wider(a: Sequence[float] | None, b: Sequence[float]) -> list[float]:
-    return list(b) if a is None else [float(end(*both)) for end, *both in zip(_ENDS, a, b, strict=True)]
+    return list(b) if a is None else [float(np.fmin(a[0], b[0])), float(np.fmax(a[1], b[1]))]
 
 
 def _looked(
@@ -326,15 +325,13 @@ def _looked(
 ) -> tuple[bool, tuple[NDArray, NDArray] | None, NDArray]:
     """Whether all values are finite, if so the extremes of each step, and its zeros; `prints` takes fingerprints."""
     if compiled(x.shape[1]):
-        from procgen.checks import fused
-
         low, high, zeros = np.empty((3, len(x)), dtype=np.int64)
-        finite = fused.looked(np.ascontiguousarray(x), _weights(first_step, len(x)), prints, low, high, zeros)
+        in_one_pass("looked", np.ascontiguousarray(x), _weights(first_step, len(x)), prints, low, high, zeros)
         ends = low.view(float), high.view(float)
     else:
         prints += fingerprint(x, first_step)
         ends, zeros = (x.min(axis=1), x.max(axis=1)), np.count_nonzero(x == 0.0, axis=1)
-        finite = bool(np.isfinite(ends).all())
+    finite = bool(np.isfinite(ends).all())
     return finite, ends if finite else None, zeros
 
 

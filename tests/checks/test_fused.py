@@ -144,6 +144,7 @@ def test_a_pass_over_an_ensemble(monkeypatch):
     values["x"][5, 130] = np.nan
     found = []
     for repays in (10**9, 1):
+        monkeypatch.setattr(room, "LOADING_REPAYS", repays)
         monkeypatch.setattr(room, "COMPILING_REPAYS", repays)
         one = Pass(plan, compile=room.repays(88 * 300))
         assert one.compile is (repays == 1)
