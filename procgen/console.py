@@ -47,6 +47,9 @@ def run(app: typer.Typer) -> NoReturn:
         app()
     except KeyboardInterrupt:  # before or after the command itself
         sys.exit(INTERRUPTED)
+    except MemoryError as error:
+        said(sentence(error))
+        sys.exit(BAD_INPUT)
     sys.exit(0)
 
 
@@ -100,7 +103,9 @@ def sentence(error: Exception) -> str:
     """What went wrong, for a person: our own errors say it themselves, others in one line."""
     if type(error).__module__.startswith("procgen."):
         return str(error)
-    if isinstance(error, MemoryError):
+    from procgen.ensemble.errors import lacks_memory
+
+    if lacks_memory(error):
         return "not enough memory; ask for fewer paths or steps at a time, or fewer workers"
     if isinstance(error, OSError):
         where = f"{error.filename}: " if error.filename else ""

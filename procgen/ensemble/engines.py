@@ -23,7 +23,7 @@ from dataclasses import dataclass
 from types import FrameType
 from typing import Any, Protocol
 
-from procgen.ensemble.errors import EnsembleError, system_sentence
+from procgen.ensemble.errors import EnsembleError, lacks_memory, system_sentence
 
 Progress = Callable[[int, int], None]  # (rows done so far, rows in all)
 Records = list[dict[str, Any]]
@@ -91,7 +91,8 @@ class Crew:
     def interruptible(self) -> Iterator[None]:
         """Let Ctrl-C stop the work at the next tick; the second Ctrl-C stops it at once.
 
-        Where Python delivers the exception itself, it can be lost: in a `__del__` it is only printed.
+        Where Python delivers the exception itself, it can be lost: in a `__del__` it is only printed. SIGTERM is
+        treated the same where the caller takes it as a Ctrl-C.
         """
 
         def stop(number: int, frame: FrameType | None) -> None:
@@ -99,14 +100,17 @@ class Crew:
                 raise KeyboardInterrupt
             self.fail(KeyboardInterrupt())
 
-        ours = self._caller is threading.main_thread() and signal.getsignal(signal.SIGINT) is signal.default_int_handler
-        if ours:
-            signal.signal(signal.SIGINT, stop)
+        ours = []
+        if self._caller is threading.main_thread():
+            both = (signal.SIGINT, signal.SIGTERM)
+            ours = [number for number in both if signal.getsignal(number) is signal.default_int_handler]
+        for number in ours:
+            signal.signal(number, stop)
         try:
             yield
         finally:
-            if ours:
-                signal.signal(signal.SIGINT, signal.default_int_handler)
+            for number in ours:
+                signal.signal(number, signal.default_int_handler)
 
 
 @dataclass(frozen=True)
@@ -180,8 +184,12 @@ def _work(crew: Crew, work: str, helping: int, inherit: int | None, advice: str)
             crew.show()
     except Stopped:
         pass
-    except OSError as error:
-        raise EnsembleError(system_sentence(error, "starting a worker process")) from None
+    except EnsembleError:
+        raise
+    except Exception as error:
+        if lacks_memory(error):
+            raise EnsembleError(f"not enough memory; give it more, or {advice}") from None
+        raise
     finally:
         for helper in helpers:
             helper.end()
@@ -223,7 +231,15 @@ class Helper(threading.Thread):
     def __init__(self, crew: Crew, work: str, inherit: int | None, advice: str):
         super().__init__(daemon=True)
         self.crew, self.work, self.advice = crew, work, advice
-        self.process = subprocess.Popen(
+        try:
+            self.process = self._process(inherit)
+        except OSError as error:
+            raise EnsembleError(system_sentence(error, "starting a worker process")) from None
+        self.start()
+
+    @staticmethod
+    def _process(inherit: int | None) -> subprocess.Popen[str]:
+        return subprocess.Popen(
             [sys.executable, "-P", "-c", "from procgen.ensemble.worker import main; main()"],
             stdin=subprocess.PIPE,
             stdout=subprocess.PIPE,
@@ -233,7 +249,6 @@ class Helper(threading.Thread):
             pass_fds=() if inherit is None else (inherit,),
             process_group=0 if os.name == "posix" else None,  # Ctrl-C is for this process alone to act on
         )
-        self.start()
 
     def run(self) -> None:
         try:

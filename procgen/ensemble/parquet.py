@@ -194,7 +194,12 @@ def _opened(path: Place, rows: Form) -> Iterator[pq.ParquetFile]:
                     f"{path} is damaged: expected {rows.total()} rows ({rows.whole}), got {file.metadata.num_rows}"
                 )
             yield file
-    except (OSError, pa.ArrowException) as error:
+    except MemoryError as error:
+        raise EnsembleError(
+            f"{path} cannot be read in the memory there is ({_first_line(error) or 'none is left'}); give it more, or, "
+            "if it is damaged, draw it again with --resume (resume=True)"
+        ) from None
+    except (OSError, UnicodeDecodeError, pa.ArrowException) as error:
         raise EnsembleError(
             f"{path} is damaged: {_first_line(error)}; draw it again with --resume (resume=True)"
         ) from None

@@ -13,7 +13,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from procgen.ensemble.errors import EnsembleError
+from procgen.ensemble.errors import EnsembleError, system_sentence
 from procgen.ensemble.parquet import IDENTITY
 from procgen.ensemble.places import readable
 from procgen.ensemble.plan import Block
@@ -110,7 +110,10 @@ def _write(folder: Folder, name: str, tables: Iterator[pa.Table], identity: Mapp
     first = next(tables, None)
     if first is None:
         return
-    (folder.path / FOLDER).mkdir(exist_ok=True)
+    try:
+        (folder.path / FOLDER).mkdir(exist_ok=True)
+    except OSError as error:
+        raise EnsembleError(system_sentence(error, f"making {folder.path / FOLDER}")) from None
     marked = first.schema.with_metadata({IDENTITY: json.dumps(dict(identity))})
     with folder.writing(name) as temporary, pq.ParquetWriter(temporary, marked) as writer:
         for table in (first, *tables):

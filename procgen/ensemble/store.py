@@ -183,11 +183,11 @@ class Folder:
                     if not (self.path / PLAN).exists():
                         self.state.rmdir()
             return
-        made = [folder for folder in (self.path, *self.path.parents) if not folder.exists()]
         assert isinstance(self.state, Path)
-        if self.state.is_symlink():
-            raise EnsembleError(f"{self.state} is a link to another place; remove it, or choose another OUT")
         try:
+            made = [folder for folder in (self.path, *self.path.parents) if not folder.exists()]
+            if self.state.is_symlink():
+                raise EnsembleError(f"{self.state} is a link to another place; remove it, or choose another OUT")
             descriptor = self._lock(time.monotonic() + patience)
         except (NotADirectoryError, FileExistsError) as error:
             above = (*reversed(self.path.parents), self.path)

@@ -44,15 +44,21 @@ class Worker:
         self._say(rows=rows)
 
     def _do(self, work: str, task: dict[str, Any]) -> None:
-        from procgen.ensemble.engines import function
-        from procgen.ensemble.errors import EnsembleError
+        from procgen.ensemble.errors import EnsembleError, lacks_memory, system_sentence
 
         try:
+            from procgen.ensemble.engines import function
+
             self._say(records=function(work)(task, self._tick))
         except EnsembleError as error:
             self._say(error=str(error))
-        except MemoryError:
-            self._say(memory="")
+        except Exception as error:
+            if lacks_memory(error):
+                self._say(memory="")
+            elif isinstance(error, OSError):
+                self._say(error=system_sentence(error, "the work of a worker process"))
+            else:
+                raise
 
     def _listen(self) -> None:
         rest = b""
