@@ -25,6 +25,8 @@ SHORTEST, LONGEST = 4, 32  # values in a marked stretch
 _OFTEN = 4  # one stretch in 2 ** 4 is marked, at most
 _VALUES = 1e10  # as many values as an ensemble may be thought to have
 _CERTAIN = 1e-12  # expected number of repeats by chance below which one is no chance
+FEW = 4  # rarities that are no chance,
+RARITY = _CERTAIN ** (1 / FEW)  # where no more than this of them are expected
 _LIKELY = 0.5  # chance of one more equal value, from which on nothing is said
 _MIX = (np.uint64(0x9E3779B97F4A7C15), np.uint64(0xBF58476D1CE4E5B9))
 # Terms that add or follow shocks, and those that move without chance: no value of them is held or drawn again.
@@ -143,6 +145,7 @@ class Watch:
         self.before = np.full((self.length - 1, paths), np.nan)
         self.run = np.ones(paths, dtype=np.int64)
         self.longest: Run = [1, -first_path, 0]
+        self.stayed = 0  # values that equal the one before
         self.marks, self.waiting = Marks.none(), [Marks.none()]
 
     def absorb(self, x: NDArray) -> None:
@@ -152,7 +155,7 @@ class Watch:
         else:
             rows = np.concatenate([self.before, x])
             same = rows[self.length - 1 :] == rows[self.length - 2 : -1]
-            self._follow(x, same.any(axis=1))
+            self._follow(x, np.count_nonzero(same, axis=1))
             self._mark(rows)
         self.before = (x if len(x) >= self.length - 1 else np.concatenate([self.before, x]))[1 - self.length :].copy()
         self.step += len(x)
@@ -160,7 +163,7 @@ class Watch:
     def _compiled(self, x: NDArray) -> None:
         some, paths = np.empty(len(x), dtype=np.int64), x.shape[1]
         in_one_pass("stays", self.before, x, some)
-        self._follow(x, some > 0)
+        self._follow(x, some)
         room = Marks(*(np.empty(x.size, each.dtype) for each in self.marks.arrays))
         mixed, where, counted = np.empty((3, paths), np.uint64), np.empty(paths, np.int64), np.empty(1, np.int64)
         in_one_pass("marked", self.before, x, self.ends, _MIX, *room.arrays, mixed, where, counted)
@@ -168,8 +171,9 @@ class Watch:
         path, step = self.first_path + room.paths[:count], self.step + room.steps[:count]
         self._keep(Marks(room.hashes[:count].copy(), room.values[:count].copy(), path, step))
 
-    def _follow(self, x: NDArray, some: NDArray[np.bool_]) -> None:
-        """Go on with runs over the steps of a tile; `some`: whether some path has the value of the step before."""
+    def _follow(self, x: NDArray, some: NDArray[np.int64]) -> None:
+        """Go on with runs over the steps of a tile; `some`: how many paths have the value of the step before."""
+        self.stayed += int(some.sum())
         for row in np.flatnonzero(some):
             if row and not some[row - 1]:
                 self.run[:] = 1
@@ -213,16 +217,22 @@ class Watch:
 
 
 def checks(
-    series: str, repeats: Repeats, run: Run, marks: Marks, paths: NDArray, prints: NDArray
+    series: str, repeats: Repeats, run: Run, marks: Marks, paths: NDArray, prints: NDArray, stayed: int = 0
 ) -> Iterator[Check]:
     """Whether some values of a series stay, or are there twice.
 
     `paths`, `prints`: the fingerprints of whole paths; those that are equal from end to end are told elsewhere.
+    `stayed`: how many values equal the one before.
     """
     length, path, step = run[0], -run[1], -run[2]
     fault = ""
     if length >= repeats.stays:
         fault = f"{length:,} equal values in a row at path {path}, steps {step}–{step + length - 1}, as if stuck"
+    elif stayed >= FEW and repeats.values * repeats.chance < RARITY:
+        fault = (
+            f"{stayed:,} values equal the one before bit for bit, such as that of path {path}, step "
+            f"{step + length - 1}, as if carried forward"
+        )
     yield Check.fact(series, STUCK, "all steps", fault, "no value stays where chance moves it")
     fault = _copied(marks.ordered(), repeats.length, paths, prints)
     yield Check.fact(series, COPIED, "all pairs", fault, "no stretch of steps was found twice")

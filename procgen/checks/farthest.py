@@ -152,7 +152,7 @@ def ties(series: str, scores: Scores, known: Sequence[Far], n: int) -> Iterator[
     if len(most) >= _TIED:
         fault = (
             f"{len(most)} of the {len(known)} shocks farthest out are equal, the first at path {-most[0][2]}, step "
-            f"{-most[0][1]}, value {number(most[0][4], 6)}, as if cut there"
+            f"{-most[0][1]}, value {number(most[0][4], 6)}, as if cut there, or rounded"
         )
     yield Check.fact(series, "shocks: equal ones", "the farthest", fault, "no two of the farthest shocks are the same")
 

@@ -42,7 +42,7 @@ class Plan:
     gaps: dict[str, Any] = field(default_factory=dict)  # series -> the term that leaves values out
     noise: dict[str, float] = field(default_factory=dict)  # series -> variance that rounding adds to a shock
     relations: Sequence[Relation] = ()
-    strangers: Sequence[tuple[str, str]] = ()  # pairs of series that nothing ties
+    strangers: Sequence[tuple[str, str, bool]] = ()  # pairs of series that are not one, and whether shocks correlate
 
     def __post_init__(self) -> None:
         self.names = [plan.name for plan in self.series]
@@ -232,7 +232,7 @@ class Gather:
         return [values for values in found if values.dtype == kind]
 
 
-_FACTS = ("not_finite", "off_grid", "narrow", "far", "beyond", "outside", "moved", "zeros", "ends", "runs")
+_FACTS = ("not_finite", "off_grid", "narrow", "far", "beyond", "outside", "moved", "zeros", "ends", "runs", "stayed")
 
 
 def _lags(plan: SeriesPlan) -> tuple[int, ...]:

@@ -22,9 +22,8 @@ _UNSEEN = (0, 0, 0, 0, *(0 for _ in _GRIDS))  # that fit float32, whole ones, al
 _MOST = 0.9  # share of values that must be rounded
 _CERTAIN = 1e-12  # expected number of equal pairs below which one equal pair is no chance
 _WHOLE = 2.0**40  # size beyond which a number may have no digits after the point without being rounded
-ZEROS, _FILLED = "values that are 0", 4  # so many zeros are no chance where each of them is a rarity
+ZEROS = "values that are 0"
 _BEGUN = 16  # zeros of earlier steps may say that values begin late, which is another fault, or that they begin at 0
-_RARITY = _CERTAIN ** (1 / _FILLED)  # expected zeros, at most
 
 
 @dataclass
@@ -58,6 +57,7 @@ class Structure:
     zeros: dict[str, list[int]] = field(default_factory=dict)  # series -> [count, path, step] of zeros
     ends: dict[str, list[float]] = field(default_factory=dict)  # series -> the least and the largest value of a sample
     runs: dict[str, copies.Run] = field(default_factory=dict)  # series -> its longest run of one value
+    stayed: dict[str, int] = field(default_factory=dict)  # series -> values that equal the one before
     marks: dict[str, copies.Marks] = field(default_factory=dict)  # series -> stretches that would show in a copy
     prints: list[tuple[int, NDArray[np.uint64]]] = field(default_factory=list)  # (first path, (paths, series))
 
@@ -120,6 +120,7 @@ class Structure:
         for column, watch in watches.items():
             name = self.series[column].name
             self.runs[name], self.marks[name] = watch.finish()
+            self.stayed[name] = watch.stayed
 
     def close(self, first_path: int, prints: NDArray[np.uint64]) -> None:
         self.prints.append((first_path, prints))
@@ -163,6 +164,7 @@ class Structure:
         support.merge(self.moved, other.moved)
         for name, run in other.runs.items():
             self.runs[name] = max(self.runs.get(name, run), run)
+            self.stayed[name] = self.stayed.get(name, 0) + other.stayed[name]
             self.marks[name] = self.marks.get(name, copies.Marks.none()).joined(other.marks[name])
         self.prints += other.prints
 
@@ -195,7 +197,7 @@ class Structure:
 
     def _zeros(self, what: Precision) -> Iterator[Check]:
         n = self.steps * sum(len(rows) for _, rows in self.prints)
-        if what.repeats is None or n * what.repeats.chance > _RARITY:
+        if what.repeats is None or n * what.repeats.chance > copies.RARITY:
             return
         count, path, step = self.zeros.get(what.name, (0, -1, -1))
         low, high = self.ends.get(what.name, (-1.0, 1.0))
@@ -207,7 +209,7 @@ class Structure:
             note = "values are rounded, so that 0 may be one of them"
             yield Check(what.name, ZEROS, "all steps", "structure", outcome="untestable", note=note)
             return
-        fault = fault if count >= _FILLED and low < high else ""
+        fault = fault if count >= copies.FEW and low < high else ""
         yield Check.fact(what.name, ZEROS, "all steps", fault, "as good as no value is exactly 0")
 
     def _precision(self, what: Precision) -> Check:
@@ -252,7 +254,8 @@ class Structure:
         column = list(self.series).index(what)
         paths, prints = self.fingerprints()
         run, marks = self.runs[what.name], self.marks[what.name]
-        return list(copies.checks(what.name, repeats, run, marks, paths, prints[:, column]))
+        stayed = self.stayed[what.name]
+        return list(copies.checks(what.name, repeats, run, marks, paths, prints[:, column], stayed))
 
     def _copies(self, chance_of_equal: dict[str, float]) -> Iterator[Check]:
         prints = np.concatenate([rows for _, rows in sorted(self.prints, key=lambda item: item[0])])

@@ -112,7 +112,8 @@ def _as_known(row: Check, origin: Any) -> None:
 
 
 def _labelled(labels: Sequence[Any], match: re.Match[str]) -> str:
-    return match[1] + " and ".join(str(labels[int(number)]) for number in match[2].split(" and "))
+    numbers = [int(number) for number in match[2].split(" and ")]
+    return match[1] + " and ".join(str(labels[k]) if k < len(labels) else str(k) for k in numbers)
 
 
 def _only_absent(row: Check, gather: Gather, absent: int) -> bool:

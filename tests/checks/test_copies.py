@@ -105,6 +105,20 @@ def test_a_stuck_sensor_and_a_frozen_path_are_named(true):
     assert notes(spoiled(true, frozen)) == {STUCK: "450 equal values in a row at path 9, steps 50–499, as if stuck"}
 
 
+def carried(x):
+    x[::7, 20::30] = x[::7, 19:-1:30]
+
+
+def test_values_that_are_carried_forward_are_told(true):
+    body, _ = true
+    found = notes(spoiled(true, carried))
+    if isinstance(body, dict):  # of 2 decimals: neighbours are equal now and then
+        assert not found
+        return
+    said = "288 values equal the one before bit for bit, such as that of path 0, step 20, as if carried forward"
+    assert found == {STUCK: said}
+
+
 def filled(x):
     x[::7, 20::30] = 0.0
 

@@ -149,9 +149,8 @@ def test_a_worker_that_is_killed_is_said(parts):
     os.kill(worker, signal.SIGKILL)
     out, err = process.communicate(timeout=60)
     assert (process.returncode, out) == (2, "")
-    assert err == (
-        "procgen: a worker process died (killed by signal 9); signal 9 is often a lack of memory: use fewer --workers\n"
-    )
+    said = "procgen: a worker process died (killed by signal 9); signal 9 is often a lack of memory: "
+    assert err == said + "use fewer workers (--workers, workers=)\n"
 
 
 @pytest.mark.skipif(not sys.platform.startswith("linux"), reason="reads /proc")
