@@ -337,6 +337,6 @@ def perform(text: str) -> str:
         except EnsembleError as error:
             return json.dumps({"error": str(error)})
         except MemoryError:
-            said = "a worker ran out of memory; give it more, then go on with --resume (resume=True)"
-            return json.dumps({"error": said})
+            message = "a worker ran out of memory; give it more, then go on with --resume (resume=True)"
+            return json.dumps({"error": message})
     return json.dumps({"records": records, "rows": rows})
