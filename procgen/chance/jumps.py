@@ -34,9 +34,9 @@ class Jumps:
         )
 
     def distribution(self, start: float = 0.0) -> Any:
-        """The law, or with a `start` that of start·exp of it: cdf, sf, pdf, ppf, mean, var, and `lump`.
+        """The law, or with a `start` that of start·exp of it: cdf, sf, pdf, ppf, mean, var, `atoms` and `chance`.
 
-        lump: the chance of the value without shock and jumps (0 beside a shock); cdf counts it from that value on.
+        atoms: the value without shock and jumps, which has a chance of its own (none beside a shock).
         """
         lumps = [part for part in self.parts if part[2] == 0.0]
         rest = Normals(tuple(part for part in self.parts if part[2] > 0.0)).distribution()
@@ -51,6 +51,10 @@ class Jumps:
 
         class Law:
             lump = sum(part[0] for part in lumps)
+            atoms = (float(start * np.exp(shift) if start else shift),) if lumps else ()
+
+            def chance(self, x):
+                return self.lump * np.isin(np.asarray(x, float), self.atoms)
 
             def _inner(self, x):
                 with np.errstate(divide="ignore", invalid="ignore"):
@@ -76,6 +80,8 @@ class Jumps:
                     low, high = np.where(enough, low, middle), np.where(enough, middle, high)
                     if np.all(high - low <= 1e-13 * np.maximum(np.abs(high), 1e-3 * far)):
                         break
+                upto = rest.cdf(shift)
+                high = np.where((p > upto) & (p <= upto + self.lump), shift, high)
                 y = np.where(p <= 0.0, -np.inf, np.where(p >= 1.0, np.inf, high))
                 return start * np.exp(y) if start else y
 

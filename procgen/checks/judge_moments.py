@@ -15,6 +15,7 @@ from procgen.checks.limits import limit, sample_of
 from procgen.checks.probes import CrossPlan, SeriesPlan
 from procgen.checks.start import start_checks
 from procgen.checks.verdict import Check
+from procgen.theory.lumps import atoms_of
 
 _QUANTILES = (0.01, 0.99)
 _MOVED = 25  # values, at least, that coarse rounding must move by a cell before their mean can be judged
@@ -150,6 +151,9 @@ def _laws(gather: Gather, column: int) -> Iterator[Check]:
         law = plan.scores[i].distribution
         if getattr(law.frozen, "spacing", 0.0):
             yield from special.whole_numbers(plan.name, _at(plan, i), law.frozen, values[:, k], i, plan.grain)
+            continue
+        if atoms_of(law.frozen):
+            yield from special.lumps(plan.name, _at(plan, i), law.frozen, values[:, k], i, plan.grain)
             continue
         z = (values[:, k] - law.mean) / law.sd
         if plan.grain > 0.02 * law.sd / math.sqrt(len(values)):

@@ -26,9 +26,13 @@ _WHY = "values are missing"
 
 
 def taken_out(graph: Any, spec: Any) -> dict[str, Any]:
-    """The terms that leave values out, by series; in the graph, their bodies take their places."""
+    """The terms that leave values out, by series; in the graph, their bodies take their places.
+
+    What shows which values they leave out keeps them.
+    """
     from procgen.spec.entries import walk
     from procgen.spec.varying import found_in
+    from procgen.terms.combine import Hidden
     from procgen.terms.misfits import gaps_of
 
     bodies = [(name, one.of) for part in (spec.series, spec.shared) for name, one in part.items()]
@@ -47,7 +51,8 @@ def taken_out(graph: Any, spec: Any) -> dict[str, Any]:
         term.drawn = term.address in drawn  # type: ignore[attr-defined]
     if found:
         for node in graph.order():
-            node.inputs = tuple([without(part) for part in node.inputs])
+            if not isinstance(getattr(node, "term", None), Hidden):
+                node.inputs = tuple([without(part) for part in node.inputs])
         graph.series = {name: without(root) for name, root in graph.series.items()}
     return found
 

@@ -18,6 +18,7 @@ from numpy.typing import NDArray
 from procgen.checks import rounding
 from procgen.checks.blocks import Window, across, add_products, scratch
 from procgen.checks.slow import Slow, SlowLane, plan_slow
+from procgen.theory.lumps import atoms_of
 from procgen.theory.verdict import STRICT
 
 GAUSSIAN_WINDOW = 96  # steps of a pooled statistic with an exact law (its cost grows with the cube)
@@ -221,6 +222,8 @@ def _shares(plan: Any, step: int) -> Shares | None:
     theory = plan.theory
     lumps = theory.discrete or getattr(theory, "lumpy", False)
     if plan.gaussian or lumps or theory.stationarity.verdict != STRICT or (law := theory.marginal(step)) is None:
+        return None
+    if atoms_of(law):
         return None
     points = np.asarray(law.ppf(np.array(QUANTILES)), float)
     if plan.grain:

@@ -18,9 +18,12 @@ from procgen.checks.blocks import across, add_products
 from procgen.checks.verdict import Check
 from procgen.terms.base import Unknown
 from procgen.terms.ranks import Ranking, ranking
+from procgen.theory.lumps import nearest
 
 FEW = 25.0  # variance of a number of events, at least, that is judged
-_SHARES = (0.02, 0.98)  # chances of the least value between which its share is worth a check
+NEAR = 1e-12  # of the size of values: what is as near to an atom is it
+_SHARES = (0.02, 0.98)  # chances of a value between which its share is worth a check
+_FEW_ATOMS = 4  # more values with a chance of their own are judged by their law alone
 
 
 def lumpy(theory: Any) -> bool:
@@ -59,6 +62,41 @@ def whole_numbers(
     if _SHARES[0] < chance < _SHARES[1]:
         count = int(np.count_nonzero(x < least + law.spacing / 2.0))
         yield Check.of(series, f"share of {least:.6g}", probe, "law", judge.share(count, len(x), chance))
+
+
+def lumps(series: str, probe: str, law: Any, x: NDArray, seed: int, grain: float = 0.0) -> Iterator[Check]:
+    """A law in which some values have a chance of their own: ranks spread over it, and how often such a value is met.
+
+    law: of the values x, with `atoms`, `chance`, `cdf` and `ppf`. grain: the distance of neighbouring values as stored.
+    """
+    v = np.random.default_rng(seed).random(len(x))
+    if grain:
+        below, upto = law.cdf(x - grain / 2.0), law.cdf(x + grain / 2.0)
+    else:
+        x = _at_atoms(law, x)
+        upto = law.cdf(x)
+        below = upto - law.chance(x)
+    note = f"Anderson–Darling, {len(x)} paths, ranks spread over the chance of a value"
+    yield Check.of(series, "law", probe, "law", judge.anderson_darling(below + v * (upto - below)), note)
+    atoms = law.atoms if len(law.atoms) <= _FEW_ATOMS else ()
+    if float(sum(law.chance(np.array(atoms)))) > 1.0 - NEAR:
+        atoms = atoms[:-1]  # the share of the last one follows
+    for atom in atoms:
+        chance, met = float(law.chance(atom)), x == atom
+        if grain:
+            stored = grain * np.rint(atom / grain)
+            chance = float(law.cdf(stored + grain / 2.0) - law.cdf(stored - grain / 2.0))
+            met = np.abs(x - stored) < grain / 2.0
+        if _SHARES[0] < chance < _SHARES[1]:
+            count = int(np.count_nonzero(met))
+            yield Check.of(series, f"share of {atom + 0.0:.6g}", probe, "law", judge.share(count, len(x), chance))
+
+
+def _at_atoms(law: Any, x: NDArray) -> NDArray:
+    """Values with those that are an atom but for rounding put on it."""
+    atom = nearest(law.atoms, x)
+    size = float(law.ppf(0.9)) - float(law.ppf(0.1)) + max(map(abs, law.atoms))
+    return np.where(np.abs(x - atom) <= NEAR * size, atom, x)
 
 
 class EventSums:

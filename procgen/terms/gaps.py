@@ -71,6 +71,9 @@ class Missing(Term):
         missing, state = self.chain.recurse(inputs[1:], state, at)
         return self._out(inputs[0], missing), state
 
+    def shown(self, output):
+        return self.chain if output == "missing" else None
+
     def ahead(self, steps, state, body, *chain):
         return Ahead(body.mean, body.variance)
 

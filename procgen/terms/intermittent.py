@@ -51,7 +51,10 @@ class Whole:
 
     def expression(self, axis, key):
         central = tuple((moment,) for moment in self.counts.central)
-        return axis.drawn(key, UNIFORM, axis.level(0.0), (self.mean,), central, discrete=True)
+        law = self.counts.distribution()
+        return axis.drawn(
+            key, UNIFORM, axis.level(0.0), (self.mean,), central, given=lambda _: law, discrete=True
+        )
 
     def ranks(self, x):
         return self.counts.distribution().cdf(x - 1.0)
@@ -170,6 +173,9 @@ class Intermittent(Term):
             found.append((values > edge if above else values < edge, np.where(on, chance, np.nan)))
         return found
 
+    def shown(self, output):
+        return self.flag if output == "occurs" else None
+
     def ahead(self, steps, state, *inputs):
         comes, size = self.flag.ahead(steps, state), self.law_of_size
         square = size.mean * size.mean + size.sd * size.sd
@@ -184,7 +190,7 @@ class Intermittent(Term):
     def moments(self, axis, *inputs):
         occurs = self.flag_moments(axis)
         size = self.law_of_size.expression(axis, f"{self.address}.size")
-        return axis.offering(axis.product([occurs, size]), occurs=occurs)
+        return axis.offering(axis.inflated(occurs, size, 1.0 - self.share), occurs=occurs)
 
     def flag_moments(self, axis):
         enter, stay = self.flag.chances
@@ -230,6 +236,9 @@ class ZeroInflated(Term):
 
     def _values(self, body, passes):
         return {"": np.where(passes > 0.0, body, 0.0), "passes": passes}
+
+    def shown(self, output):
+        return self.flag if output == "passes" else None
 
     def ahead(self, steps, state, body, *inputs):
         share = 1.0 - self.share

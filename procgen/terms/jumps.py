@@ -87,6 +87,9 @@ class CompoundPoisson(Term):
         on = (cell[0] >= 0.0) | (cell[1] < 0.0)
         return (on, np.full(values.shape, jumped)), (np.abs(values) > edge, np.where(on, beyond, np.nan))
 
+    def shown(self, output):
+        return Jumped(self.rate) if output == "jumps" else None
+
     def ahead(self, steps, state, *inputs):
         flat = np.ones((len(steps), 1))
         return Ahead(self.rate * self.mean * flat, self.rate * (self.mean**2 + self.sd**2) * flat)
@@ -99,7 +102,8 @@ class CompoundPoisson(Term):
         four = m**4 + 6.0 * m**2 * sd**2 + 4.0 * m * sd**3 * z[3] + sd**4 * z[4]
         rate, key = axis.level(self.rate), self.address
         central = (0.0, two), (0.0, three), (0.0, four, 3.0 * two * two)
-        total = axis.drawn(key, UNIFORM, rate, (0.0, m), central, lumpy=True, highest=self.law.highest_moment)
+        law = (lambda _: Jumps(self.rate, m, sd).distribution()) if self.law.gaussian else None
+        total = axis.drawn(key, UNIFORM, rate, (0.0, m), central, law, lumpy=True, highest=self.law.highest_moment)
         poisson = (0.0, 1.0), (0.0, 1.0), (0.0, 1.0, 3.0)
         jumps = axis.drawn(f"{key}.jumps", UNIFORM, rate, (0.0, 1.0), poisson, discrete=True, beside=total)
         return axis.offering(total, jumps=jumps)
@@ -107,3 +111,23 @@ class CompoundPoisson(Term):
     def equation(self, *inputs):
         jump = f"{number(self.mean)} + {number(self.sd)} z,  z independent {self.law}"
         return f"x[t] = J₁ + … + J_N[t],  N[t] Poisson of mean {number(self.rate)},  J = {jump}"
+
+
+class Jumped:
+    """How many jumps fall into each step from `first` on, as a hidden output shows it to checks; none before."""
+
+    watched = ("jumps",)
+
+    def __init__(self, rate: float, first: int = 0):
+        self.law, self.first = Poisson(rate).distribution(), first
+
+    def unranked(self) -> str:
+        return ""
+
+    def rank(self, values, cell, known, state, at):
+        lost = np.where(at < self.first, np.nan, 0.0)[:, None]
+        return (self.law.cdf(cell[0]) + lost, self.law.cdf(cell[1]) + lost), {}
+
+    def events(self, values, cell, known, state, at):
+        chance = np.where(at < self.first, np.nan, float(self.law.sf(0.0)))[:, None]
+        return ((values > 0.5, chance + np.zeros(values.shape)),)

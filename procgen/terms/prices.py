@@ -13,6 +13,7 @@ from procgen.chance.portable import exp, log
 from procgen.chance.tables import Poisson, uniforms
 from procgen.spec.declare import Parameter, Real
 from procgen.terms.base import Ahead, Draw, Term, Unknown, number, signed
+from procgen.terms.jumps import Jumped
 from procgen.terms.support import POSITIVE
 from procgen.terms.walk import RandomWalk
 
@@ -34,8 +35,8 @@ class Brownian(Term):
     source = "Samuelson (1965); Black & Scholes (1973)"
     example = "geometric_brownian_motion: {drift: {value: 0.08, per: year}, sd: {value: 0.2, per: year}, start: 100}"
     knows = "mean, covariance and lognormal law at any steps; before step 0 it is followed backwards at random"
-    correlates = True
     leaves_as = "exp: [{random_walk: {sd: σ, drift: μ − σ²/2}}]"
+    correlates = True
     parameters: ClassVar[tuple[Parameter, ...]] = (DRIFT, SD, START)
 
     def __init__(self, values):
@@ -168,6 +169,9 @@ class Merton(Term):
     @property
     def watched(self):
         return (f"changes beyond {FAR:g}σ",)
+
+    def shown(self, output):
+        return Jumped(self.rate, first=1) if output == "jumps" else None
 
     def events(self, values, cell, known, state, at):
         law, logs = self.change().distribution(), np.log(values)

@@ -101,11 +101,7 @@ class Clip(Elementwise):
         return body.within(-INF if self.low is None else self.low, INF if self.high is None else self.high)
 
     def moments(self, axis, body):
-        # min(max(x, l), h) = l + (x − l)₊ − (x − h)₊, and x − (x − h)₊ where there is no l
-        held = body
-        if self.low is not None:
-            held = axis.level(self.low) + axis.hinge(body + axis.level(-self.low))
-        return held if self.high is None else held + axis.hinge(body + axis.level(-self.high)) * -1.0
+        return axis.bounded(body, self.low, self.high)
 
     def equation(self, body):
         text = f"{body}[t]" if self.low is None else f"max({body}[t], {number(self.low)})"
@@ -129,7 +125,7 @@ class Abs(Elementwise):
         return either([body, body * finite([-1.0])]).within(0.0, INF)
 
     def moments(self, axis, body):
-        return axis.hinge(body) * 2.0 + body * -1.0
+        return axis.folded(body)
 
     def equation(self, body):
         return f"y[t] = |{body}[t]|"
@@ -190,7 +186,7 @@ class Sigmoid(Elementwise):
         return Support(float(self.low), float(self.high))
 
     def moments(self, axis, body):
-        return axis.curved(body, self.of_value)
+        return axis.squeezed(body, self.of_value, float(self.low), float(self.high))
 
     def equation(self, body):
         return f"y[t] = {number(self.low)} + {number(self.high - self.low)}/(1 + exp(−{body}[t]))"
@@ -215,7 +211,7 @@ class Logit(Elementwise):
         return Sigmoid.of_value(self, values), {}  # type: ignore[arg-type]
 
     def moments(self, axis, body):
-        return axis.opaque((body,), f"{self.address}: log odds of a random body have no closed moments")
+        return axis.log_odds(body, self.of_value, float(self.low), float(self.high))
 
     def equation(self, body):
         return f"y[t] = log(({body}[t] − {number(self.low)})/({number(self.high)} − {body}[t]))"

@@ -11,16 +11,15 @@ import numpy as np
 
 from procgen.theory import known, markov, vector
 from procgen.theory.arma import PowerSeries, spectral_radius
+from procgen.theory.bends import Bending
 from procgen.theory.chains import States, Switching
 from procgen.theory.expression import Expression, opaque, product
 from procgen.theory.fractional import Filtered, FractionalNoise, GaussianNoise, StationaryGaussian
 from procgen.theory.known import Known
-from procgen.theory.lattice import Rounded
-from procgen.theory.laws import is_gaussian
 from procgen.theory.left import LeftOpen
 from procgen.theory.linear import At, Base, Linear
 from procgen.theory.parallel import ParallelGarch
-from procgen.theory.processes import Chain, Curved, Held, Hinged, Process, Seen, mean_at
+from procgen.theory.processes import Chain, Held, Process, Seen, mean_at
 from procgen.theory.sources import GARCH, IID, PROCESS, Source, Space, roots
 from procgen.theory.stated import Stating
 from procgen.theory.unknown import Unknown
@@ -29,7 +28,7 @@ from procgen.theory.volatile import Volatile
 
 
 @dataclass
-class Axis(Volatile, Stating):
+class Axis(Volatile, Stating, Bending):
     """The steps of a spec and its sources.
 
     Parameters
@@ -222,42 +221,6 @@ class Axis(Volatile, Stating):
             path = known.constant(float(mean_at(x, np.array([first]))[0]))
         return self.process(Seen(self.name, x, step_of), path) if x.sources else Expression(self.space, path)
 
-    def hinge(self, x: Expression) -> Expression:
-        """max(x, 0): closed where x is known or Gaussian.
-
-        What is mostly above 0 is x + max(-x, 0), whose second part is small: differences of such parts keep digits.
-        """
-        level = x.mean_path.value
-        if level is not None and level > 0.0 and x.sources and not x.terms and is_gaussian(x):
-            return x + self._of_gaussian(x * -1.0, _bent, Hinged(self.name, x * -1.0))
-        return self._of_gaussian(x, _bent, Hinged(self.name, x))
-
-    def curved(self, x: Expression, f: Callable[[np.ndarray], np.ndarray]) -> Expression:
-        """f(x) for a smooth f of slow growth: by its Hermite series where x is Gaussian."""
-        return self._of_gaussian(x, f, Curved(self.name, x, f))
-
-    def rounded(
-        self, x: Expression, f: Callable[[np.ndarray], np.ndarray], to: float, shift: float = 0.0
-    ) -> Expression:
-        """f(x), which is x + `shift` multiples of `to`, rounded to multiples of it: closed where x is Gaussian."""
-        return self._of_gaussian(x, f, Rounded(self.name, x + self.level(shift * to), to))
-
-    def _of_gaussian(self, x: Expression, f: Callable[[np.ndarray], np.ndarray], process: Any) -> Expression:
-        if not x.sources:
-            if x.mean_path.value is not None:
-                return Expression(self.space, known.constant(float(f(np.array(x.mean_path.value)))))
-            path, note = x.mean_path, "; ".join(x.mean_path.notes)
-            whole = known.whole(("of", self.name, path.key), lambda t: f(path.at(t)), path.periods, note)
-            return Expression(self.space, whole)
-        if not is_gaussian(x):
-            return self._given_up(x, "moments of a bend are not worked out for a body that is not Gaussian")
-        steady = judge(x).covariance_stationary
-        if steady and x.mean_path.value is not None:
-            return self.process(process, known.constant(float(process.mean(np.zeros(1, np.int64))[0])))
-        periods, note = x.mean_path.periods if steady else None, f"the mean moves in {self.name}"
-        key = ("mean", self.name, len(self._processes))
-        return self.process(process, known.whole(key, process.mean, periods, note))
-
     def process(self, process: Process, mean: Known | None = None) -> Expression:
         """A process with a memory of its own around its mean (0 when absent)."""
         depends = frozenset(root for x in process.ingredients for source in x.sources for root in roots(source))
@@ -309,10 +272,6 @@ class Axis(Volatile, Stating):
 def _coarser(period: float, k: int) -> float:
     """A period of a pattern that is read every k steps, in readings."""
     return lcm(int(period), k) / k if float(period).is_integer() else period / k
-
-
-def _bent(v: np.ndarray) -> np.ndarray:
-    return np.maximum(v, 0.0)
 
 
 def _mean_path_at(x: Expression, steps: np.ndarray) -> np.ndarray:

@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import numpy as np
 
+from procgen.theory.lumps import Few
+
 Steps = np.ndarray
 AT_ONCE = 1 << 22
 
@@ -26,6 +28,12 @@ class Blocks:
     def mean(self, steps: Steps) -> np.ndarray:
         """E x at steps."""
         return self.level + self.means[np.asarray(steps, np.int64) % self.size]
+
+    def law(self, step: int) -> Few:
+        """The law at a step: the numbers that a block can have there, each as often as it begins so."""
+        place = step % self.size
+        values, counts = np.unique(self.rest[place : place + self.starts] + self.level, return_counts=True)
+        return Few(values.tolist(), (counts / self.starts).tolist())
 
     def covariance(self, t: Steps, s: Steps) -> np.ndarray:
         """Cov(x(t), x(s)): 0 between blocks."""

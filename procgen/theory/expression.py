@@ -48,7 +48,12 @@ class Expression:
         if len(terms) > MOST_TERMS:
             return opaque(self.space, (self, other), f"a sum of more than {MOST_TERMS} products")
         lumpy = (self.lumpy or other.lumpy) and all(x.lumpy or not x.sources for x in (self, other))
-        return Expression(self.space, self.mean_path + other.mean_path, self.linear + other.linear, terms, lumpy=lumpy)
+        law = None
+        for x, rest in ((self, other), (other, self)):
+            if x.law is not None and not rest.sources:
+                law = _moved(x.law, 1.0, rest.mean_path)
+        path, linear = self.mean_path + other.mean_path, self.linear + other.linear
+        return Expression(self.space, path, linear, terms, law=law, lumpy=lumpy)
 
     def __mul__(self, factor: float) -> Expression:
         return Expression(
@@ -57,6 +62,7 @@ class Expression:
             self.linear.scaled(factor),
             {term: factor * c for term, c in self.terms.items()} if factor else {},
             self.outputs,
+            law=None if self.law is None or not factor else _moved(self.law, factor),
             lumpy=self.lumpy,
         )
 
@@ -64,6 +70,8 @@ class Expression:
 
     def lag(self, by: int) -> Expression:
         """The series `by` steps ago."""
+        if not by:
+            return self
         terms = [(t, c * k) for term, c in self.terms.items() for t, k in term.lag(by)]
         return Expression(self.space, self.mean_path.lag(by), self.linear.lag(by), _collect(terms), lumpy=self.lumpy)
 
@@ -146,6 +154,17 @@ class Expression:
         for term in self.terms:
             found |= term.sources
         return found
+
+
+def _moved(law: Callable[[int], Any], factor: float, path: Known | None = None) -> Callable[[int], Any]:
+    """The laws of a series times a factor, or beside a known path."""
+
+    def moved(step: int) -> Any:
+        from procgen.theory.laws import Affine
+
+        return Affine(law(step), 0.0 if path is None else float(path(np.array([step]))[0]), factor)
+
+    return moved
 
 
 def product(space: Space, expressions: Sequence[Expression]) -> Expression:

@@ -10,9 +10,12 @@ from procgen.theory import exponentials
 from procgen.theory.covariance import covariance
 from procgen.theory.expression import Expression
 from procgen.theory.linear import At, Linear
+from procgen.theory.lumps import atoms_of, chance_of, nearest
 from procgen.theory.monomials import Term
 from procgen.theory.sources import GARCH, IID, OPAQUE, PROCESS, SQUARES, Source, Space
 from procgen.theory.unknown import Unknown
+
+ROUNDING = 2e-15  # of the numbers that are subtracted
 
 
 def is_gaussian(x: Expression) -> bool:
@@ -56,9 +59,9 @@ def marginal(x: Expression, step: int) -> Any:
         if source.kind == OPAQUE:
             raise Unknown(source.reason)
     if any(source.kind == PROCESS and source.detail.discrete for source in x.sources):
-        from procgen.theory.mixtures import normals_at
+        from procgen.theory.mixtures import mixture_at
 
-        return normals_at(x, step)
+        return mixture_at(x, step)
     raise Unknown(f"a combination of shocks that are not normal ({_names(x)}) has no closed law")
 
 
@@ -81,17 +84,35 @@ class Affine:
         """The distance of neighbouring values where only such have a chance, else 0."""
         return abs(self.scale) * getattr(self.law, "spacing", 0.0)
 
+    @property
+    def atoms(self) -> tuple[float, ...]:
+        """The values with a chance of their own beside others."""
+        return tuple(sorted(self.location + self.scale * x for x in atoms_of(self.law)))
+
+    def chance(self, x):
+        """P(X = x)."""
+        return chance_of(self.law, self._z(x))
+
     def _z(self, x):
-        return (np.asarray(x, float) - self.location) / self.scale
+        """What x is of z; where that is an atom but for rounding, the atom."""
+        x = np.asarray(x, float)
+        z = (x - self.location) / self.scale
+        if not (atoms := atoms_of(self.law)):
+            return z
+        atom = nearest(atoms, z)
+        off = np.abs(z - atom) * abs(self.scale)
+        return np.where(off <= ROUNDING * (np.abs(x) + abs(self.location)), atom, z)
 
     def pdf(self, x):
         return self.law.pdf(self._z(x)) / abs(self.scale)
 
     def cdf(self, x):
-        return self.law.cdf(self._z(x)) if self.scale > 0 else self.law.sf(self._z(x))
+        z = self._z(x)
+        return self.law.cdf(z) if self.scale > 0 else self.law.sf(z) + chance_of(self.law, z)
 
     def sf(self, x):
-        return self.law.sf(self._z(x)) if self.scale > 0 else self.law.cdf(self._z(x))
+        z = self._z(x)
+        return self.law.sf(z) if self.scale > 0 else self.law.cdf(z) - chance_of(self.law, z)
 
     def ppf(self, p):
         p = np.asarray(p, float)

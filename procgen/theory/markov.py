@@ -13,6 +13,7 @@ from procgen.theory import known
 from procgen.theory.chains import States, Switching
 from procgen.theory.expression import Expression
 from procgen.theory.linear import At, Linear, base_of
+from procgen.theory.lumps import Few
 from procgen.theory.processes import Process, Steps
 from procgen.theory.sources import GARCH
 from procgen.theory.unknown import Unknown
@@ -44,6 +45,10 @@ class Indicator(Process):
     def _with(self, other: Indicator, t: Steps, s: Steps) -> np.ndarray:
         one = np.eye(len(self.chain.p))
         return self.chain.covariance(one[self.state], one[other.state], t, s)
+
+    def marginal(self, step):
+        p = float(self.chain.chances(np.array([step]))[0][self.state])
+        return Few((-p, 1.0 - p), (1.0 - p, p))
 
     def product(self, factors, t, s):
         """E M E N and Cov(M, N) of products of forms in the states at one step each: both are functions of it."""

@@ -1,4 +1,4 @@
-"""The law at one step of a series that is Gaussian in each state of a chain: a mixture of normals (Hamilton 1989)."""
+"""The law at one step of a series whose law is known in each state of a chain: a mixture (Hamilton 1989)."""
 
 from __future__ import annotations
 
@@ -9,9 +9,11 @@ import numpy as np
 from procgen.chance.laws.mixture import Normals
 from procgen.theory import known
 from procgen.theory.expression import Expression
-from procgen.theory.laws import is_gaussian
+from procgen.theory.laws import is_gaussian, marginal
 from procgen.theory.linear import At, Linear, base_of
+from procgen.theory.lumps import Lumped, Point
 from procgen.theory.markov import Indicator
+from procgen.theory.mixedlaw import Normal
 from procgen.theory.monomials import Term
 from procgen.theory.sources import Source
 from procgen.theory.unknown import Unknown
@@ -19,8 +21,8 @@ from procgen.theory.unknown import Unknown
 ROUNDING = 1e-24  # of the variance: what is left of a spread that a state takes away
 
 
-def normals_at(x: Expression, step: int) -> Any:
-    """The law of x at a step as a frozen SciPy distribution; Unknown where it is no mixture of normals."""
+def mixture_at(x: Expression, step: int) -> Any:
+    """The law of x at a step, with the calls of a frozen SciPy distribution; Unknown where it is no mixture."""
     states = [source for source in x.sources if _is_state(source)]
     if not states:
         raise Unknown("a sum or product of a flag and other chance has no law that is computed")
@@ -31,16 +33,41 @@ def normals_at(x: Expression, step: int) -> Any:
     at = np.array([step - delays.pop()], np.int64)
     chances = states[0].detail.chain.chances(at)[0]
     here, parts = np.array([step], np.int64), []
-    whole = float(x.covariance(x, here, here)[0])
+    whole = _variance(x, here)
     for state in np.flatnonzero(chances > 0.0):
-        inner = _given(x, int(state), chances, here)
-        if not is_gaussian(inner):
-            raise Unknown("it is not Gaussian in each state of its chain")
-        variance = float(inner.covariance(inner, here, here)[0])
-        if variance <= ROUNDING * whole:
-            raise Unknown("in a state of its chain it is one number: its law has no density")
-        parts.append((float(chances[state]), float(inner.mean(here)[0]), float(np.sqrt(variance))))
-    return Normals(tuple(parts)).distribution()
+        parts.append((float(chances[state]), _law(_given(x, int(state), chances, here), step, whole)))
+    if all(isinstance(law, Normal) for _, law in parts):
+        return Normals(tuple((p, law.mean, law.sd) for p, law in parts)).distribution()
+    from scipy import stats
+
+    laws = [stats.norm(law.mean, law.sd) if isinstance(law, Normal) else law for _, law in parts]
+    return Lumped([p for p, _ in parts], laws)
+
+
+def _variance(x: Expression, here: np.ndarray) -> float:
+    """Of x at a step; 0 where there is none."""
+    try:
+        variance = float(x.covariance(x, here, here)[0])
+    except Unknown:
+        return 0.0
+    return variance if np.isfinite(variance) else 0.0
+
+
+def _law(x: Expression, step: int, whole: float) -> Any:
+    """The law in one state, of a series whose variance over all states is `whole`."""
+    here = np.array([step], np.int64)
+    if x.sources and not is_gaussian(x):
+        try:
+            return marginal(x, step)
+        except Unknown as unknown:
+            raise Unknown(f"in a state of its chain, {unknown.reason}") from None
+    variance = float(x.covariance(x, here, here)[0])
+    mean = float(x.mean(here)[0])
+    if variance > ROUNDING * whole:
+        return Normal(mean, float(np.sqrt(variance)))
+    # A mean of differences: what these have rounded is below the 13th digit of the whole.
+    size = abs(mean) + float(np.sqrt(whole))
+    return Point(round(mean, 13 - int(np.ceil(np.log10(size)))) if size else mean)
 
 
 def _given(x: Expression, state: int, chances: np.ndarray, at: np.ndarray) -> Expression:

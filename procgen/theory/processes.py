@@ -75,6 +75,11 @@ class Chain(Process):
     def covariance(self, t, s):
         return self.p * (1.0 - self.p) * self.r ** np.abs(t - s).astype(float)
 
+    def marginal(self, step):
+        from procgen.theory.lumps import Few
+
+        return Few((-self.p, 1.0 - self.p), (1.0 - self.p, self.p))
+
     def product(self, factors, t, s):
         # A product of values at one step takes two values, as the chain does: it is a line in it.
         (m_off, m_on, m_by), (n_off, n_on, n_by) = (self._line([f for f, side in factors if side == i]) for i in (0, 1))

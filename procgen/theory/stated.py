@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 from dataclasses import replace
+from itertools import combinations
 from typing import Any
 
 import numpy as np
@@ -15,6 +16,7 @@ from procgen.theory.elapsed import Pulled, forecast
 from procgen.theory.expression import Expression, product
 from procgen.theory.known import Known
 from procgen.theory.linear import At, Linear, base_of
+from procgen.theory.lumps import Lumped, Point, atoms_of
 from procgen.theory.processes import Held, Process, alone, at_any, mean_at
 from procgen.theory.sources import Space
 from procgen.theory.unknown import Unknown
@@ -70,7 +72,10 @@ class Stated(Process):
         at = np.array([step], np.int64)
         if float(self.covariance(at, at)[0]) <= 0.0:
             raise Unknown("the value at that step is known, not random")
-        return super().marginal(step) if self._law is None else Centred(self._law(step))
+        if self._law is None:
+            return super().marginal(step)
+        law = self._law(step)
+        return less(law, law.mean()) if atoms_of(law) else Centred(law)
 
 
 class Drawn(Process):
@@ -114,7 +119,7 @@ class Drawn(Process):
             return other.detail.with_expression(alone_of(self, own), s, t)
         if isinstance(other.detail, Drawn):
             drawn = [source for x in (self.driver, other.detail.driver) for source in x.sources]
-            if len(set(drawn)) == len(drawn) and not self.body.space.dependent(*drawn):
+            if not any(self.body.space.dependent(a, b) for a, b in combinations(drawn, 2)):
                 return at_any(self.level, other.detail.level, t, s)
             return super().with_process(own, other, t, s)
         return self.with_expression(alone_of(self, other), t, s)
@@ -172,7 +177,8 @@ class Drawn(Process):
             return super().marginal(step)
         at = np.array([step], np.int64)
         if not self.body.sources:
-            return Centred(self.law(float(mean_at(self.body, at)[0])))
+            law = self.law(float(mean_at(self.body, at)[0]))
+            return less(law, law.mean()) if atoms_of(law) else Centred(law)
         if not self.discrete:
             return super().marginal(step)
         return Centred(Compound(self.law, marginal(self.body, step)))
@@ -199,7 +205,8 @@ class Stating:
         of = Blocks(numbers, size, circular)
         why = f"a new block every {size} steps in {self.name}" if size > 1 else ""
         mean = of.mean if np.ptp(of.means) > 0.0 else of.level
-        x = self.stated(key, driver, mean, of.covariance, period=size, moment=of.moment, lumpy=True, cycles=why)
+        more = {"law": of.law, "moment": of.moment, "lumpy": True, "cycles": why}
+        x = self.stated(key, driver, mean, of.covariance, period=size, **more)
         (drawn,) = x.sources
 
         def together(t: Steps, s: Steps) -> np.ndarray:
@@ -267,13 +274,13 @@ class Stating:
     def inflated(self, passes: Expression, body: Expression, share: float) -> Expression:
         """A body where `passes` is 1, which it is with probability 1 - share, and 0 where it is 0."""
 
-        def law(step: int) -> Inflated:
+        def law(step: int) -> Any:
             from procgen.theory.laws import marginal
 
             inner = marginal(body, step)
-            if not getattr(inner, "spacing", 0.0):
-                raise Unknown("a law with a chance of 0 beside a density is not computed")
-            return Inflated(inner, share)
+            if getattr(inner, "spacing", 0.0):
+                return Inflated(inner, share)
+            return Lumped((share, 1.0 - share), (Point(0.0), inner))
 
         return replace(product(self.space, [passes, body]), law=law)
 
@@ -312,6 +319,13 @@ def powers_of(process: Process, factors: list[tuple[Linear, int]], side: int) ->
     if not single or len(delays) > 1 or any(not isinstance(key, At) for key, _ in keys):
         raise Unknown(f"moments of {process.name} at three steps, or with what it depends on, are not known")
     return len(forms), float(np.prod([c for _, c in keys])), min(delays, default=0)
+
+
+def less(law: Any, mean: float) -> Any:
+    """A law less its mean."""
+    from procgen.theory.laws import Affine
+
+    return Affine(law, -float(mean), 1.0)
 
 
 def alone_of(process: Any, source: Any) -> Expression:

@@ -7,7 +7,7 @@ from itertools import product
 import numpy as np
 import pytest
 from mpmath import mp
-from scipy.stats import norm
+from scipy.stats import laplace, lognorm, norm
 from statsmodels.tsa.regime_switching.markov_regression import MarkovRegression
 
 from procgen.spec.model import SpecError
@@ -302,11 +302,38 @@ def test_the_law_at_a_step_is_a_mixture_of_normals(start):
 
 
 @pytest.mark.parametrize("start", ["stationary", "b"])
-def test_laws_that_are_no_mixture_of_normals_are_refused_with_a_reason(start):
+def test_a_state_with_one_number_is_a_value_with_a_chance_of_its_own(start):
+    """Weights from powers of P, SciPy's normal beside a step at 2 (Hamilton 1989, the mixture at one step)."""
     branches = "branches: {b: [{constant: 400, as: up}, {white_noise: {sd: 2}}], a: [{constant: 2}]}"
     known = theory_of(graph_of(f"  x: {{regimes: {{durations: {{a: 9, b: 240}}, start: {start}, {branches}}}}}"))
+    p = np.array([[239 / 240, 1 / 240], [1 / 9, 8 / 9]])
     for step in (3, 84):
-        assert known.marginal(step) is None and "one number" in known.reason("marginal")
+        share = (np.array([1.0, 0.0]) @ np.linalg.matrix_power(p, step))[1] if start == "b" else 9 / 249
+        law, at = known.marginal(step), np.array([1.9, 2.0, 2.1, 399.0, 405.0])
+        expected = share * (at >= 2) + (1 - share) * norm.cdf(at, 400, 2)
+        assert law.atoms == (2.0,) and law.chance(np.array([2.0, 2.5])) == pytest.approx([share, 0], rel=1e-11)
+        assert law.cdf(at) == pytest.approx(expected, rel=1e-11)
+        assert law.ppf(share / 2) == 2.0 and law.ppf(1 - (1 - share) / 2) == pytest.approx(400)
+        assert law.mean() == pytest.approx(known.mean([step])[0]) and law.var() == pytest.approx(
+            known.variance([step])[0]
+        )
+
+
+def test_states_of_other_laws_are_mixed_too():
+    """A Laplace and a lognormal law by SciPy, in their shares 0.75 and 0.25."""
+    branches = "a: [{white_noise: {sd: 1, law: laplace}}], b: [{exp: [{ar: {phi: 0.5, total_sd: 1}}]}]"
+    law = theory_of(graph_of(f"  x: {{regimes: {{branches: {{{branches}}}, durations: {{a: 9, b: 3}}}}}}")).marginal(5)
+    at = np.linspace(-4, 9, 40)
+    expected = 0.75 * laplace.cdf(at, 0, np.sqrt(0.5)) + 0.25 * lognorm.cdf(at, 1)
+    assert law.cdf(at) == pytest.approx(expected, rel=1e-10)
+    assert law.cdf(law.ppf([0.01, 0.4, 0.99])) == pytest.approx([0.01, 0.4, 0.99])
+
+
+def test_a_law_that_is_not_known_in_a_state_is_not_known_at_all():
+    branches = "a: [{garch: {sd: 1, alpha: 0.1, beta: 0.8}}], b: [{constant: 3}]"
+    known = theory_of(graph_of(f"  x: {{regimes: {{branches: {{{branches}}}, durations: {{a: 9, b: 3}}}}}}"))
+    assert known.marginal(3) is None
+    assert known.reason("marginal").startswith("in a state of its chain, a combination of shocks that are not normal")
 
 
 @pytest.mark.parametrize(

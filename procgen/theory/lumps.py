@@ -1,0 +1,302 @@
+"""Laws in which some values have a chance of their own: what is held between bounds, spikes beside a density.
+
+They have the calls of a frozen SciPy distribution, and beside these `atoms`, the values with a chance of their own in
+ascending order, and `chance(x)`, that of x. `pdf` is the density of the rest.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from functools import cached_property
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from procgen.theory.mixedlaw import MixedLaw
+from procgen.theory.unknown import Unknown
+
+NEAR = BESIDE = 1e-6  # of the distance of two values of a lattice: what is as near to a value is it
+
+
+def chance_of(law: Any, x: Any) -> NDArray:
+    """P(X = x) for a law of any kind; 0 where only a density is known."""
+    x = np.asarray(x, float)
+    if hasattr(law, "chance"):
+        return law.chance(x)
+    width = BESIDE * getattr(law, "spacing", 0.0)
+    return law.cdf(x + width) - law.cdf(x - width) if width else np.zeros(x.shape)
+
+
+def nearest(values: Sequence[float], x: Any) -> NDArray:
+    """The one of the ascending values that is nearest to each x."""
+    x, table = np.asarray(x, float), np.asarray(values, float)
+    after = np.clip(np.searchsorted(table, x), 1, max(len(table) - 1, 1))
+    low, high = table[after - 1], table[np.minimum(after, len(table) - 1)]
+    return np.where(np.abs(x - low) <= np.abs(x - high), low, high)
+
+
+def atoms_of(law: Any) -> tuple[float, ...]:
+    """The values of a law that have a chance of their own beside others; none where all values are of a lattice."""
+    return getattr(law, "atoms", ())
+
+
+class Point:
+    """One value, for certain: a part of a mixture."""
+
+    spacing = 0.0
+
+    def __init__(self, value: float):
+        self.value, self.atoms = float(value), (float(value),)
+
+    def cdf(self, x: Any) -> NDArray:
+        return 1.0 * (np.asarray(x, float) >= self.value)
+
+    def sf(self, x: Any) -> NDArray:
+        return 1.0 * (np.asarray(x, float) < self.value)
+
+    def pdf(self, x: Any) -> NDArray:
+        return np.zeros(np.shape(x))
+
+    def ppf(self, p: Any) -> NDArray:
+        return np.full(np.shape(p), self.value)
+
+    isf = ppf
+
+    def chance(self, x: Any) -> NDArray:
+        return 1.0 * (np.asarray(x, float) == self.value)
+
+    def mean(self) -> float:
+        return self.value
+
+    def var(self) -> float:
+        return 0.0
+
+
+class Few:
+    """One of a few values, each with its chance."""
+
+    spacing = 0.0
+
+    def __init__(self, values: Sequence[float], chances: Sequence[float]):
+        order = np.argsort(values)
+        self._values, self._chances = np.asarray(values, float)[order], np.asarray(chances, float)[order]
+        self._upto = np.concatenate([[0.0], np.cumsum(self._chances)])
+        self._beyond = np.concatenate([np.cumsum(self._chances[::-1])[::-1], [0.0]])
+        self.atoms = tuple(self._values.tolist())
+
+    def cdf(self, x: Any) -> NDArray:
+        return self._upto[np.searchsorted(self._values, x, side="right")]
+
+    def sf(self, x: Any) -> NDArray:
+        return self._beyond[np.searchsorted(self._values, x, side="right")]
+
+    def pdf(self, x: Any) -> NDArray:
+        return np.zeros(np.shape(x))
+
+    def chance(self, x: Any) -> NDArray:
+        at = np.minimum(np.searchsorted(self._values, x), len(self._values) - 1)
+        return np.where(self._values[at] == x, self._chances[at], 0.0)
+
+    def ppf(self, p: Any) -> NDArray:
+        return self._values[np.minimum(np.searchsorted(self._upto[1:], p), len(self._values) - 1)]
+
+    def isf(self, p: Any) -> NDArray:
+        return self.ppf(1.0 - np.asarray(p, float))
+
+    def mean(self) -> float:
+        return float(self._values @ self._chances)
+
+    def var(self) -> float:
+        return float((self._values - self.mean()) ** 2 @ self._chances)
+
+    def std(self) -> float:
+        return float(np.sqrt(self.var()))
+
+
+class Lumped(MixedLaw):
+    """A finite mixture of laws and of single values."""
+
+    @cached_property
+    def atoms(self) -> tuple[float, ...]:
+        return tuple(sorted({value for law in self.laws for value in atoms_of(law)}))
+
+    def chance(self, x: Any) -> NDArray:
+        x = np.asarray(x, float)
+        found = [w * chance_of(law, x) for w, law in zip(self.weights, self.laws, strict=True)]
+        return np.sum(found, axis=0)
+
+    def ppf(self, p: Any) -> NDArray:
+        p = np.asarray(p, float)
+        x = super().ppf(p)
+        for value in self.atoms:
+            upto = float(self.cdf(value))
+            x = np.where((p > upto - float(self.chance(value))) & (p <= upto), value, x)
+        return x
+
+
+class Bounded:
+    """A law of which all that is beyond `low` or `high` is put on it (Tobin 1958)."""
+
+    def __init__(self, law: Any, low: float = -np.inf, high: float = np.inf):
+        self.law, self.low, self.high = law, float(low), float(high)
+        self.spacing = getattr(law, "spacing", 0.0)
+        ends = [end for end in (self.low, self.high) if np.isfinite(end)]
+        if self.spacing and not all(abs(_off(end - float(law.ppf(0.5)), self.spacing)) <= NEAR for end in ends):
+            raise Unknown("its bounds are no values of its body: what lies on two lattices has no law that is computed")
+
+    @cached_property
+    def atoms(self) -> tuple[float, ...]:
+        if self.spacing:
+            return ()
+        ends = [end for end in (self.low, self.high) if np.isfinite(end) and float(self.chance(end)) > 0.0]
+        return tuple(sorted({*ends, *(x for x in atoms_of(self.law) if self.low < x < self.high)}))
+
+    def chance(self, x: Any) -> NDArray:
+        x = np.asarray(x, float)
+        inside = np.where((x > self.low) & (x < self.high), chance_of(self.law, x), 0.0)
+        upper = self.law.sf(self.high) + chance_of(self.law, self.high) if np.isfinite(self.high) else 0.0
+        lower = self.law.cdf(self.low) if np.isfinite(self.low) else 0.0
+        return np.where(x == self.low, lower, np.where(x == self.high, upper, inside))
+
+    def cdf(self, x: Any) -> NDArray:
+        x = np.asarray(x, float)
+        return np.where(x < self.low, 0.0, np.where(x >= self.high, 1.0, self.law.cdf(x)))
+
+    def sf(self, x: Any) -> NDArray:
+        x = np.asarray(x, float)
+        return np.where(x < self.low, 1.0, np.where(x >= self.high, 0.0, self.law.sf(x)))
+
+    def pdf(self, x: Any) -> NDArray:
+        x = np.asarray(x, float)
+        return np.where((x > self.low) & (x < self.high), self.law.pdf(x), 0.0)
+
+    def ppf(self, p: Any) -> NDArray:
+        return np.clip(self.law.ppf(p), self.low, self.high)
+
+    def isf(self, p: Any) -> NDArray:
+        return np.clip(self.law.isf(p), self.low, self.high)
+
+    def mean(self) -> float:
+        return self._moments[0]
+
+    def var(self) -> float:
+        return self._moments[1]
+
+    def std(self) -> float:
+        return float(np.sqrt(self.var()))
+
+    @cached_property
+    def _moments(self) -> tuple[float, float]:
+        return moments(self)
+
+
+class Folded:
+    """The law of |X| for an X that has a density (Leone, Nelson & Nottingham 1961)."""
+
+    spacing = 0.0
+
+    def __init__(self, law: Any):
+        if getattr(law, "spacing", 0.0) or atoms_of(law):
+            raise Unknown("the size of what has values with a chance of their own has no law that is computed")
+        self.law = law
+
+    def cdf(self, x: Any) -> NDArray:
+        x = np.maximum(np.asarray(x, float), 0.0)
+        return self.law.cdf(x) - self.law.cdf(-x)
+
+    def sf(self, x: Any) -> NDArray:
+        x = np.maximum(np.asarray(x, float), 0.0)
+        return self.law.sf(x) + self.law.cdf(-x)
+
+    def pdf(self, x: Any) -> NDArray:
+        x = np.asarray(x, float)
+        return np.where(x >= 0.0, self.law.pdf(x) + self.law.pdf(-x), 0.0)
+
+    def ppf(self, p: Any) -> NDArray:
+        return self._where(p, lambda x, p: np.where(p < 0.5, self.cdf(x) < p, self.sf(x) > 1.0 - p))
+
+    def isf(self, p: Any) -> NDArray:
+        return self._where(1.0 - np.asarray(p, float), lambda x, q: self.sf(x) > np.asarray(p, float))
+
+    def _where(self, p: Any, beyond: Any) -> NDArray:
+        from procgen.chance.laws.mixture import halved
+
+        p = np.asarray(p, float)
+        ends = np.abs([self.law.ppf((1.0 - p) / 2.0), self.law.isf((1.0 - p) / 2.0)])
+        return halved(lambda x: beyond(x, p), np.zeros(p.shape), ends.max(axis=0))
+
+    def mean(self) -> float:
+        return moments(self)[0]
+
+    def var(self) -> float:
+        return float(self.law.var()) + float(self.law.mean()) ** 2 - self.mean() ** 2
+
+    def std(self) -> float:
+        return float(np.sqrt(self.var()))
+
+
+class Mapped:
+    """The law of f(X) for an f that rises; `back` undoes it, `rise` is the derivative of `back`."""
+
+    spacing = 0.0
+
+    def __init__(self, law: Any, f: Any, back: Any, rise: Any, ends: Sequence[float] = (-np.inf, np.inf)):
+        if getattr(law, "spacing", 0.0) or atoms_of(law):
+            raise Unknown("a curve of what has values with a chance of their own has no law that is computed")
+        self.law, self.f, self._back, self._rise, (self.low, self.high) = law, f, back, rise, ends
+
+    def _of(self, x: Any, what: Any, below: float, above: float) -> NDArray:
+        x = np.asarray(x, float)
+        inside = (x > self.low) & (x < self.high)
+        with np.errstate(divide="ignore", invalid="ignore"):
+            found = what(np.where(inside, x, self.f(0.0)))
+        return np.where(inside, found, np.where(x <= self.low, below, above))
+
+    def cdf(self, x: Any) -> NDArray:
+        return self._of(x, lambda y: self.law.cdf(self._back(y)), 0.0, 1.0)
+
+    def sf(self, x: Any) -> NDArray:
+        return self._of(x, lambda y: self.law.sf(self._back(y)), 1.0, 0.0)
+
+    def pdf(self, x: Any) -> NDArray:
+        return self._of(x, lambda y: self.law.pdf(self._back(y)) * self._rise(y), 0.0, 0.0)
+
+    def ppf(self, p: Any) -> NDArray:
+        return self.f(np.asarray(self.law.ppf(p), float))
+
+    def isf(self, p: Any) -> NDArray:
+        return self.f(np.asarray(self.law.isf(p), float))
+
+    def mean(self) -> float:
+        return moments(self)[0]
+
+    def var(self) -> float:
+        return moments(self)[1]
+
+    def std(self) -> float:
+        return float(np.sqrt(self.var()))
+
+
+def moments(law: Any) -> tuple[float, float]:
+    """Mean and variance about the median, from the areas beyond: exact but for the quadrature, some 1e-10."""
+    from scipy.integrate import quad
+
+    middle, low, high = (float(law.ppf(p)) for p in (0.5, 0.0, 1.0))
+    parts = []
+    for end, beyond in ((high, lambda d: law.sf(middle + d)), (low, lambda d: law.cdf(middle - d))):
+        reach = abs(end - middle) if end == end else np.inf  # what overflows on its way is far away
+        scale = abs(float(law.ppf(0.9)) - float(law.ppf(0.1))) or reach
+        cuts = [c for c in (0.0, scale, 8.0 * scale) if c < reach]
+        once = twice = 0.0
+        for a, b in zip(cuts, [*cuts[1:], reach], strict=True):
+            once += quad(lambda d, f=beyond: float(f(d)), a, b, epsabs=0, epsrel=1e-11, limit=200)[0]
+            twice += quad(lambda d, f=beyond: 2.0 * d * float(f(d)), a, b, epsabs=0, epsrel=1e-11, limit=200)[0]
+        parts.append((once, twice))
+    (up, up2), (down, down2) = parts
+    return middle + up - down, up2 + down2 - (up - down) ** 2
+
+
+def _off(distance: float, spacing: float) -> float:
+    """How far a distance is from a multiple of the spacing, in spacings."""
+    return distance / spacing - round(distance / spacing)
