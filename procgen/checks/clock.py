@@ -132,7 +132,7 @@ def steps_on_grid(times: Times, time: Any) -> NDArray[np.int64]:
         row = int(np.argmax(~on))
         raise ClockError(
             f"{times.column.iloc[row]} in row {row} of {times.column.name} is no step of the spec; "
-            f"{int((~on).sum())} of {many(len(on), 'row')} {'is' if len(on) == 1 else 'are'} off its grid: "
+            f"{int((~on).sum()):,} of {many(len(on), 'row')} {'is' if len(on) == 1 else 'are'} off its grid: "
             f"{difference(grid, times, time)}"
         )
     return step

@@ -191,7 +191,8 @@ class Structure:
         fault, name = "", what.name
         if name in self.not_finite:
             count, path, step = self.not_finite[name]
-            fault = f"{count} value{'s are' if count > 1 else ' is'} not finite, the first at path {path}, step {step}"
+            are = "s are" if count > 1 else " is"
+            fault = f"{count:,} value{are} not finite, the first at path {path}, step {step}"
         every = "every value that is there" if what.gaps else "every value"
         return Check.fact(name, "finite values", "all steps", fault, f"{every} is a finite number")
 
@@ -218,8 +219,8 @@ class Structure:
         if what.name in self.off_grid:
             count, path, step = self.off_grid[what.name]
             fault = (
-                f"{count} value{'s have' if count > 1 else ' has'} more than the {what.decimals} decimals declared, "
-                f"the first at path {path}, step {step}"
+                f"{count:,} value{'s have' if count > 1 else ' has'} more than the {many(what.decimals, 'decimal')} "
+                f"declared, the first at path {path}, step {step}"
             )
         fits, whole, seen, half, *_ = self.narrow.get(what.name, _UNSEEN)
         if what.type == "float64" and seen >= 32 and fits > _MOST * seen:
