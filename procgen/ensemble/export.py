@@ -94,7 +94,7 @@ class Export:
             return f"{self.path}: an array {axes} = {self._shape} of {self._type}, of {names}"
         shown = self.form.schema.names
         some = shown if len(shown) <= 8 else [*shown[:6], "…", shown[-1]]
-        head = f"{self.path}: {self.rows:,} rows, {len(shown):,} columns ({', '.join(some)})"
+        head = f"{self.path}: {self.rows:,} row{'s' * (self.rows != 1)}, {len(shown):,} columns ({', '.join(some)})"
         return f"{head} of {names}" if self.form.layout.kind in ("panel", "wide") else head
 
     def _notes(self) -> Iterator[str]:

@@ -6,7 +6,7 @@ from collections.abc import Iterator
 from textwrap import wrap
 from typing import TYPE_CHECKING
 
-from procgen.checks.words import number
+from procgen.checks.words import many, number
 from procgen.ensemble.errors import MEND
 from procgen.report.text import CAUTION, table
 
@@ -48,7 +48,7 @@ def _side(side: Side) -> str:
     whole = side.whole
     first = f" from path {whole.first_path:,}" if whole.first_path else ""
     what = "" if side.ensemble is not None else " (not drawn)"
-    return f"{side.name}: {whole.paths:,} paths × {whole.steps:,} steps{first}, seed {side.spec.seed}{what}"
+    return f"{side.name}: {many(whole.paths, 'path')} × {many(whole.steps, 'step')}{first}, seed {side.spec.seed}{what}"
 
 
 def _headline(difference: Difference) -> str:

@@ -12,13 +12,14 @@ if TYPE_CHECKING:
 
 def rendered(ensemble: OnDisk) -> str:
     """Where the ensemble is, how much of it there is, and its digest."""
+    from procgen.checks.words import many
     from procgen.ensemble.manifest import bytes_text
 
     manifest, whole, parts = ensemble.manifest, ensemble.whole, ensemble.manifest.parts
     size = bytes_text(sum(part.bytes for part in parts))
     count = sum(len(manifest.layout.files(part.file, manifest.columns)) for part in parts)
     lines = [
-        f"{ensemble.path}: {whole.paths:,} paths × {whole.steps:,} steps of {', '.join(ensemble.names)}",
+        f"{ensemble.path}: {many(whole.paths, 'path')} × {many(whole.steps, 'step')} of {', '.join(ensemble.names)}",
         f"{'1 file' if count == 1 else f'{count} files'}, {size}, and manifest.json",
         f"digest {ensemble.digest}",
     ]
