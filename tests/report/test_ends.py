@@ -40,7 +40,7 @@ def test_ends_of_terms(body, expected):
 
 
 def test_a_band_of_two_sd_ends_with_the_values():
-    made = graph(SPARE)
+    made = graph(CLAIMS)
     theory = pg.theory(made.spec)["x"]
     at = np.arange(30)
     free, kind = Stated(theory, 30).quantiles(at, (0.05, 0.5, 0.95))
