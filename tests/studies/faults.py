@@ -226,17 +226,19 @@ def study(
     pg.render(SPEC, paths=1, steps=1)  # imports what a render imports, once for all
     chance = random.Random(seed)
     (folder / "spec.yaml").write_text(json.dumps(SPEC))
-    whole, out = folder / "whole", folder / "out"
-    process = Render(whole, max(workers), False)
-    at_work(process, whole)
-    began = time.monotonic()
-    finished(process)
-    longest = time.monotonic() - began
-    digest = json.loads((whole / "manifest.json").read_text())["digest"]
+    out, longest = folder / "out", {}
+    for some in sorted(set(workers)):
+        shutil.rmtree(out, ignore_errors=True)
+        process = Render(out, some, False)
+        at_work(process, out)
+        began = time.monotonic()
+        finished(process)
+        longest[some] = time.monotonic() - began
+    digest = json.loads((out / "manifest.json").read_text())["digest"]
     found: Counter[str] = Counter()
     while sum(count for name, count in found.items() if name.startswith("struck")) < moments:
         some = chance.choice(workers)
-        found.update(once(out, chance, some, signals, longest))
+        found.update(once(out, chance, some, signals, longest[some]))
         finished(Render(out, some, True))
         aside(lambda: in_order(out, digest))
         found["stories, each with the digest of one go"] += 1
