@@ -22,6 +22,7 @@ from procgen.theory.mixedlaw import Normal
 
 PAIR_LIMIT = 36  # pairs of series that are compared
 _HUGE = 1e9  # times the size of a series
+_NEVER = 1e-9  # chance of what may be left out
 _RARE = 9.0  # the kurtosis, that of the exponential law, beyond which a few rare values make most of the spread
 
 
@@ -226,8 +227,13 @@ def _marginals(plan: SeriesPlan) -> None:
         law = partial(plan.theory.marginal, int(plan.steps[i]))
         if plan.gaussian:
             law = partial(Normal, float(plan.mean[i]), float(np.sqrt(plan.variance[i])))
-        if np.isfinite(plan.variance[i]) and (plan.gaussian or law() is not None):  # a normal law is always known
+        if np.isfinite(plan.variance[i]) and (plan.gaussian or _moves(law())):  # a normal law is always known
             plan.scores[i] = Scores(Marginal(law, float(plan.mean[i]), float(np.sqrt(plan.variance[i]))))
+
+
+def _moves(law: Any) -> bool:
+    """Whether a law is known and leaves something to chance: of a value that is certain a variance may be left over."""
+    return law is not None and float(np.ptp(law.ppf(np.array([_NEVER, 1.0 - _NEVER])))) > 0.0
 
 
 def _laws_alone(plan: SeriesPlan) -> None:

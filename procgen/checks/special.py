@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterator, Sequence
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -138,6 +139,6 @@ class EventSums:
                     yield Check(series, what, "all steps", kind, mean / n, count / n, outcome="reported", note=note)
                 continue
             z, root = (count - mean) / math.sqrt(variance), math.sqrt(variance)
-            finding = judge.unit(z, root / n, theory=mean / n, skew=third / root**3)
+            finding = replace(judge.unit(z, root / n, mean / n, third / root**3), estimate=count / n)
             doubt = judge.excess_doubt(n / variance - 6.0, int(n), "cases")
             yield Check.of(series, what, "all steps", kind, judge.with_doubt(finding, doubt))
