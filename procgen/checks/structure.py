@@ -216,7 +216,7 @@ class Structure:
     def _precision(self, what: Precision) -> Check:
         declared = what.type if what.decimals is None else f"{what.type}, {what.decimals} decimals"
         fault = ""
-        if what.name in self.off_grid:
+        if what.decimals is not None and what.name in self.off_grid:
             count, path, step = self.off_grid[what.name]
             fault = (
                 f"{count:,} value{'s have' if count > 1 else ' has'} more than the {many(what.decimals, 'decimal')} "
