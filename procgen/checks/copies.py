@@ -27,6 +27,7 @@ _VALUES = 1e10  # as many values as an ensemble may be thought to have
 _CERTAIN = 1e-12  # expected number of repeats by chance below which one is no chance
 FEW = 4  # rarities that are no chance,
 RARITY = _CERTAIN ** (1 / FEW)  # where no more than this of them are expected
+BEGUN = 16  # before this step values may say that a path begins late, or where it begins: that is another fault
 _LIKELY = 0.5  # chance of one more equal value, from which on nothing is said
 _MIX = (np.uint64(0x9E3779B97F4A7C15), np.uint64(0xBF58476D1CE4E5B9))
 # Terms that add or follow shocks, and those that move without chance: no value of them is held or drawn again.
@@ -173,7 +174,7 @@ class Watch:
 
     def _follow(self, x: NDArray, some: NDArray[np.int64]) -> None:
         """Go on with runs over the steps of a tile; `some`: how many paths have the value of the step before."""
-        self.stayed += int(some.sum())
+        self.stayed += int(some[max(BEGUN - self.step, 0) :].sum())
         for row in np.flatnonzero(some):
             if row and not some[row - 1]:
                 self.run[:] = 1

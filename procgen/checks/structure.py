@@ -23,7 +23,6 @@ _MOST = 0.9  # share of values that must be rounded
 _CERTAIN = 1e-12  # expected number of equal pairs below which one equal pair is no chance
 _WHOLE = 2.0**40  # size beyond which a number may have no digits after the point without being rounded
 ZEROS = "values that are 0"
-_BEGUN = 16  # zeros of earlier steps may say that values begin late, which is another fault, or that they begin at 0
 
 
 @dataclass
@@ -65,7 +64,7 @@ class Structure:
         """Look at a tile (steps, paths) of one series; `prints` (paths,) is updated. True when all is finite."""
         what = self.series[column]
         finite, ends, zeros = _looked(x, first_step, prints)
-        begun = max(_BEGUN - first_step, 0)
+        begun = max(copies.BEGUN - first_step, 0)
         if zeros[begun:].any() and what.repeats is not None:
             here = x == 0.0
             here[:begun] = False
