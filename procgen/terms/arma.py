@@ -283,12 +283,12 @@ def _buffer(past, like):
     return out
 
 
-def not_causal(phi, instead):
-    """What to say of an autoregression without a causal stationary solution."""
+def not_causal(phi, instead, forced=True):
+    """What to say of an autoregression without a causal stationary solution; `forced`: whether it may be run so."""
+    on_purpose = ", or give the term its own `before: {x: …}` (one at the series does not do) to run it on purpose"
     return (
         f"expected all roots of 1 − φ₁z − … outside the unit circle, got one at {_root(phi)}; shrink phi, "
-        f"or {instead}, or give the term its own `before: {{x: …}}` (one at the series does not do) to run it "
-        "on purpose"
+        f"or {instead}{on_purpose if forced else ''}"
     )
 
 

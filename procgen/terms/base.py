@@ -102,6 +102,7 @@ class Term:
     finer: ClassVar[str] = ""  # the parameter that says in how many parts its body cuts a step; empty where none does
     compiles: bool = False  # whether many paths side by side are drawn quicker where kernels are compiled
     burns_in: ClassVar[bool] = False  # whether `begin` reads its inputs from the first row on, a few rows at a time
+    blurs: ClassVar[bool] = False  # whether `invert` gives back values of a lattice only up to rounding
     gaps: ClassVar[bool] = False  # whether some of its values are missing; nothing but a factor may follow then
     portable: ClassVar[bool] = True
     why_not_portable: ClassVar[str] = ""

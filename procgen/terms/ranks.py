@@ -33,6 +33,9 @@ def ranking(graph: Graph, series: str, whole: bool, grain: float) -> Ranking | U
             hidden = [part for part in node.inputs if not isinstance(part, Source) and sources_below(graph, part)]
             if hidden:
                 return Unknown(f"{node.name} follows {hidden[0].name}, which moves by chance and is not seen")
+            blurred = [over.name for over, _ in chain if over.term.blurs]
+            if blurred:
+                return Unknown(f"{blurred[0]} gives {node.name} back only up to rounding, and its values have chances")
             return Ranking(graph, chain, node, whole, grain)
         random = [i for i, part in enumerate(node.inputs) if sources_below(graph, part)]
         if len(random) != 1 or type(node.term).invert is Term.invert:

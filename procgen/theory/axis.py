@@ -13,6 +13,7 @@ from procgen.theory import known, markov, vector
 from procgen.theory.arma import PowerSeries, spectral_radius
 from procgen.theory.bends import Bending
 from procgen.theory.chains import States, Switching
+from procgen.theory.distributed import Distributed, distributed_mean
 from procgen.theory.expression import Expression, opaque, product
 from procgen.theory.fractional import Filtered, FractionalNoise, GaussianNoise, StationaryGaussian
 from procgen.theory.known import Known
@@ -102,6 +103,17 @@ class Axis(Volatile, Stating, Bending):
         if started:
             self.space.origins.update({at.base: self.name for at in total})
         return Expression(self.space, mean, Linear(total), outputs=noise.outputs)
+
+    def distributed(self, x: Expression, phi: Sequence[float], memory: int) -> Expression:
+        """y(t) = sum phi_i y(t-i) + x(t) of any series x and a stationary filter, which forgets in `memory` steps."""
+        kinds = {source.kind for source in x.sources}
+        plain = not x.terms and all(isinstance(key, At) and not key.base.started for key in x.linear)
+        if plain and kinds <= {IID, GARCH}:
+            filtered = self.filtered(Expression(self.space, known.constant(0.0), x.linear), phi)
+        else:
+            filtered = self.process(Distributed(self.name, x, phi, memory))
+        path = distributed_mean(self.name, x, phi, memory)
+        return replace(filtered, mean_path=path, outputs={}, lumpy=x.lumpy)
 
     def walk(self, noise: Expression, drift: float, start: float) -> Expression:
         """x(0) = start, x(t) = x(t-1) + drift + a(t), followed backwards below step 0."""

@@ -29,6 +29,7 @@ class Process:
     discrete = False  # whether it takes few values, or whole numbers
     lumpy = False  # whether some of its values have a chance of their own
     gaussian = False  # whether its values at any steps are jointly Gaussian
+    filters = False  # whether it is a filter, which asks for covariances of what it filters
 
     def __init__(self, name: str, ingredients: tuple[Any, ...], says: tuple[tuple[str, str], ...] = ()):
         self.name, self.ingredients, self.says = name, ingredients, says
@@ -372,7 +373,11 @@ def _split(form: Linear) -> tuple[Linear, dict[tuple[Source, int], float]]:
 def _pair(space: Space, p: Source, q: Source, t: Steps, s: Steps) -> np.ndarray:
     if p is q:
         return p.detail.covariance(t, s)
-    return p.detail.with_process(p, q, t, s) if space.dependent(p, q) else np.zeros(t.shape)
+    if not space.dependent(p, q):
+        return np.zeros(t.shape)
+    if q.detail.filters and not p.detail.filters and not any(q in x.sources for x in p.detail.ingredients):
+        return q.detail.with_process(q, p, s, t)
+    return p.detail.with_process(p, q, t, s)
 
 
 def _against(space: Space, p: Source, form: Linear, t: Steps, s: Steps) -> np.ndarray:

@@ -350,6 +350,27 @@ FAMILIES: Mapping[str, Any] = {
         },
         "correlation": [{"between": ["x.ornstein_uhlenbeck", "y.ornstein_uhlenbeck"], "value": 0.4}],
     },
+    "distributed lags": {
+        "series": {
+            "x": [{"distributed_lag": {"of": [{"white_noise": {"sd": 1, "law": "laplace"}}], "phi": [0.5, 0.2]}}],
+            "y": [
+                {
+                    "distributed_lag": {
+                        "of": [
+                            {
+                                "regimes": {
+                                    "branches": {"low": [{"constant": 0}], "high": [{"constant": 3, "as": "c"}]},
+                                    "durations": {"low": 6, "high": 3},
+                                }
+                            },
+                            {"white_noise": {"sd": 1}},
+                        ],
+                        "phi": 0.7,
+                    }
+                }
+            ],
+        }
+    },
 }
 
 

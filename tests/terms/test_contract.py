@@ -48,6 +48,8 @@ RICH = {
     "lagged_walk": "{lag: {of: [{random_walk: {sd: 1, drift: 0.2, start: 3}}], by: 4}}",
     "lagged_garch": "{lag: {of: [{garch: {sd: 1, alpha: 0.1, beta: 0.8}}], by: 4}}",
     "lagged_integral": "{lag: {of: [{integrate: {of: [{ar: {phi: 0.5, sd: 1}}], start: 2}}], by: 3}}",
+    "distributed_lag_before": "{lag: {of: [{distributed_lag: {of: [{random_walk: {sd: 1}}, {constant: 3}], "
+    "phi: [0.4, 0, 0.2]}}], by: 9}}",
     "twice": "{difference: {of: [{random_walk: {sd: 1}}], by: 2, order: 2}}",
     "prices": "{exp: [{random_walk: {sd: 0.01, drift: 0.001, start: 3}}]}",
     "scaled": "{exp: [{ar: {phi: 0.5, sd: 0.1}, times: 2}, {constant: 1}], times: 3}",
