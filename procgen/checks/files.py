@@ -9,11 +9,13 @@ from __future__ import annotations
 import csv
 import gzip
 import io
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, BinaryIO, Protocol, TypeVar
 
 import numpy as np
+
+from procgen.spec.pages import Bomb, read_within
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -23,6 +25,10 @@ _TEXT = (".csv", ".tsv", ".txt", ".gz")
 _BOOKS = (".xlsx", ".xls", ".ods")
 _MARK = b"PAR1"  # at both ends of a Parquet file (Apache Parquet, file format)
 _CHUNK = 1 << 24  # bytes that are looked through at once
+_LINE = 1 << 24  # bytes of a line
+_COLUMNS = 200_000
+_ROOM = 1 << 26  # bytes that any file may grow to in memory
+_GROWTH = 50  # times its size that a larger one may
 _HEAD = 1 << 16
 _SEPARATORS = {",": "commas", ";": "semicolons", "\t": "tabs"}
 _AS_FRAME = "and give validate the DataFrame"
@@ -45,6 +51,8 @@ def read_file(path: Path, choose: Callable[[list[str]], N]) -> tuple[pd.DataFram
     """The columns of a file that `choose` wants of those it has, and what it said. Raises TableError."""
     if not path.exists():
         raise TableError(f"there is no file {path}")
+    if not path.is_file():
+        raise TableError(f"expected a file, got a device at {path}; give the path of a CSV or Parquet file")
     suffix = path.suffix.lower()
     try:
         if suffix in _PARQUET:
@@ -53,6 +61,8 @@ def read_file(path: Path, choose: Callable[[list[str]], N]) -> tuple[pd.DataFram
             return _text(path, choose)
     except TableError:
         raise
+    except Bomb as error:
+        raise TableError(str(error)) from None
     except gzip.BadGzipFile:
         raise TableError(f"{path} is not compressed with gzip; if it is text, give it a name without .gz") from None
     except UnicodeDecodeError as error:
@@ -84,7 +94,12 @@ def _parquet(path: Path, choose: Callable[[list[str]], N]) -> tuple[pd.DataFrame
     if last != _MARK:
         raise TableError(f"{path} is cut off: a Parquet file ends with {_MARK.decode()}; write or copy it again")
     wanted = choose(pq.read_schema(path).names)
-    return pq.read_table(path, columns=wanted.all).to_pandas(ignore_metadata=True), wanted
+    return read_within(path, wanted.all, _room(path)).to_pandas(ignore_metadata=True), wanted
+
+
+def _room(path: Path) -> int:
+    """Bytes that a file may become in memory: one that grows beyond is no table that somebody kept."""
+    return max(_ROOM, _GROWTH * path.stat().st_size)
 
 
 def _text(path: Path, choose: Callable[[list[str]], N]) -> tuple[pd.DataFrame, N]:
@@ -125,19 +140,30 @@ def _header(path: Path) -> tuple[str, list[str]]:
     """The separator and the column names: commas, or else semicolons or tabs, whichever part the first line."""
     rows = {}
     for separator in _SEPARATORS:
-        with io.TextIOWrapper(_opened(path), encoding="utf-8-sig", newline="") as lines:  # type: ignore[arg-type]
-            rows[separator] = next(row for row in csv.reader(lines, delimiter=separator) if any(map(str.strip, row)))
+        reader = csv.reader(_lines(path), delimiter=separator)
+        try:
+            rows[separator] = next(row for row in reader if any(map(str.strip, row)))
+        except csv.Error:  # a field longer than any name: something else parts this line
+            rows[separator] = []
     order = ("\t", ",", ";") if ".tsv" in path.suffixes else tuple(_SEPARATORS)
     best = next((separator for separator in order if len(rows[separator]) > 1), order[0])
+    if not rows[best]:
+        raise TableError(f"{path} begins with a line that is not one of column names; expected these, parted by commas")
+    if len(rows[best]) > _COLUMNS:
+        raise TableError(
+            f"{path} has {len(rows[best]):,} columns, at most {_COLUMNS:,} are read; is a line end missing?"
+        )
     return best, rows[best]
 
 
 def _refuse_other_lines(path: Path, separator: str, expected: int) -> None:
     """TableError for the first line with more fields than the header, or fewer; blank lines do not count."""
-    number = 0
+    number = size = 0
     with _opened(path) as file:
         while chunk := file.read(_CHUNK):
-            chunk += file.readline()
+            chunk += file.readline(_LINE)
+            size += len(chunk)
+            _refuse_size(path, chunk, size)
             if b'"' in chunk or b"\r" in chunk.replace(b"\r\n", b""):  # a field may hold separators and ends of lines
                 break
             for found in _other(chunk, separator, expected):
@@ -147,11 +173,36 @@ def _refuse_other_lines(path: Path, separator: str, expected: int) -> None:
             number += chunk.count(b"\n")
         else:
             return
-    with io.TextIOWrapper(_opened(path), encoding="utf-8-sig", newline="") as lines:  # type: ignore[arg-type]
-        reader = csv.reader(lines, delimiter=separator)
-        for row in reader:
-            if len(row) != expected and (len(row) > 1 or any(map(str.strip, row))):
-                raise _wrong_line(path, reader.line_num, row, separator, expected)
+    reader = csv.reader(_lines(path), delimiter=separator)
+    for row in reader:
+        if len(row) != expected and (len(row) > 1 or any(map(str.strip, row))):
+            raise _wrong_line(path, reader.line_num, row, separator, expected)
+
+
+def _refuse_size(path: Path, chunk: bytes, size: int) -> None:
+    """TableError for a line that does not end, and for a small file that has grown out of all proportion."""
+    if len(chunk) > _LINE and b"\n" not in chunk[-_LINE:]:
+        raise TableError(f"{path} has a line of more than {_LINE:,} bytes; expected a line for each path and step")
+    if path.suffix.lower() == ".gz" and size > _room(path):
+        raise TableError(
+            f"{path} is refused: its {path.stat().st_size:,} bytes unpack to more than {_room(path):,}; if that is "
+            "meant, unpack it, and give the path of the text"
+        )
+
+
+def _lines(path: Path) -> Iterator[str]:
+    """The lines of a text; TableError where one does not end, or the file grows out of all proportion."""
+    size = 0
+    with io.TextIOWrapper(_opened(path), encoding="utf-8-sig", newline="") as text:  # type: ignore[arg-type]
+        while line := text.readline(_LINE):
+            size += len(line)
+            if len(line) == _LINE:
+                raise TableError(
+                    f"{path} has a line of more than {_LINE:,} letters; expected one for each path and step"
+                )
+            if size > _CHUNK:
+                _refuse_size(path, b"", size)
+            yield line
 
 
 def _other(chunk: bytes, separator: str, expected: int) -> list[int]:

@@ -52,6 +52,11 @@ class Form:
         """Columns that repeat, which are packed, and alone have statistics."""
         return [*self.names.values()]
 
+    @property
+    def texts(self) -> list[str]:
+        """Columns of texts that repeat, which are read as numbers of them."""
+        return [self.names["id"]] if "id" in self.names else []
+
     def pieces(self, row_bytes: int) -> Iterator[Block]:
         """Rectangles that are read by themselves; `row_bytes` of all columns of the ensemble."""
         yield from cut(self.whole, max(min(GROUP_ROWS, BUFFER_BYTES // row_bytes), 1))
@@ -203,15 +208,14 @@ class Panel(Form):
         return {c.name: values_of(table.column(name), c, where, block) for name, c in places.items()}
 
     def _expect_id(self, table: pa.Table, name: str, block: Block, where: object) -> None:
-        import pyarrow as pa
         import pyarrow.compute as pc
 
-        column = table.column(self.names["id"]).cast(pa.string())
-        if not pc.all(pc.fill_null(pc.equal(column, name), False)).as_py():
-            others = [other for other in pc.unique(column).to_pylist() if other != name]
-            raise EnsembleError(
-                f"{where} is damaged: where rows of {name} belong ({block}), column {self.names['id']} has {others[0]}"
-            )
+        for chunk in table.column(self.names["id"]).chunks:
+            other = next((each for each in pc.unique(chunk).to_pylist() if each != name), name)
+            if other != name:
+                raise EnsembleError(
+                    f"{where} is damaged: where rows of {name} belong ({block}), column {self.names['id']} has {other}"
+                )
 
 
 class Nested(Form):

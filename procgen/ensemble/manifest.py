@@ -16,6 +16,7 @@ from procgen.ensemble.columns import TYPES, Column
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.layouts import Layout
 from procgen.ensemble.plan import Block
+from procgen.spec.tree import NAME, show_scalar
 
 FORMAT = 1
 
@@ -131,6 +132,8 @@ class Manifest:
                 changed=seals.changed(data),
             )
             _ = manifest.layout
+            if not all(isinstance(name, str) for name in manifest.identity.get("reveal", ())):
+                raise ValueError("what it reveals is not a list of names")
             covers([part.block for part in manifest.parts], whole)
             if set(manifest.stored) | set(manifest.revealed) != {column.name for column in manifest.columns}:
                 raise ValueError("its digests and its columns name different series")
@@ -148,8 +151,10 @@ def _whole(value: Any, least: int = 0) -> int:
 
 def _column(item: Mapping[str, Any]) -> Column:
     column = Column(**item)
-    if column.type not in TYPES or not isinstance(column.name, str):
-        raise ValueError(f"a column is {item!r}")
+    named = isinstance(column.name, str) and all(NAME.fullmatch(part) for part in column.name.split("."))  # no path
+    told = isinstance(column.decimals, int | None) and isinstance(column.unit, str | None)
+    if not (named and told) or column.type not in TYPES:
+        raise ValueError(f"a column is {show_scalar(str(item))}")
     return column
 
 

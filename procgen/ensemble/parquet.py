@@ -22,6 +22,7 @@ from procgen.ensemble.layouts import Layout
 from procgen.ensemble.places import Place, readable
 from procgen.ensemble.plan import GROUP_ROWS, Block, cut
 from procgen.ensemble.reading import fits
+from procgen.spec.pages import Bomb, refuse_bombs
 
 if TYPE_CHECKING:
     import pyarrow as pa
@@ -30,6 +31,7 @@ if TYPE_CHECKING:
 FAST = -5  # zstd's quick levels are as small on columns that repeat
 IDENTITY = b"procgen"  # metadata: which spec, seed, paths and steps
 NODES = b"procgen.nodes"  # metadata: the digest nodes of the part
+LARGEST = 4 * GROUP_ROWS  # rows of a row group that are read at once, whoever wrote it
 
 Blocks = Iterator[tuple[Block, dict[str, np.ndarray]]]
 
@@ -94,7 +96,7 @@ def footer(path: Place) -> tuple[dict[str, Any], dict[str, Any], pq.FileMetaData
         found = pq.read_metadata(readable(path))
         texts = found.metadata or {}
         return json.loads(texts[IDENTITY]), json.loads(texts[NODES]), found
-    except (OSError, pa.ArrowException, ValueError) as error:
+    except (OSError, pa.ArrowException, ValueError, RecursionError) as error:
         raise EnsembleError(f"{path} cannot be read as Parquet: {_first_line(error)}") from None
     except KeyError:
         raise EnsembleError(f"{path} was not written by procgen render, or was changed since") from None
@@ -151,10 +153,23 @@ def _read_groups(path: Place, rows: Form, first_path: int, end_path: int) -> Blo
             row = here.stop
             a, b = part.first_path + here.start // part.steps, part.first_path + (row - 1) // part.steps
             if here and b >= first_path and a < end_path:
-                table = file.read_row_group(group, columns=rows.needs(part, unit), use_threads=False)
-                for block in pieces(here, part):
-                    some = table.slice(rows.start(0, block) - here.start, block.rows)
-                    yield block, rows.values(some, block, unit, path)
+                for begin, table in _tables(file, group, rows.needs(part, unit)):
+                    for block in pieces(range(here.start + begin, here.start + begin + table.num_rows), part):
+                        some = table.slice(rows.start(0, block) - here.start - begin, block.rows)
+                        yield block, rows.values(some, block, unit, path)
+
+
+def _tables(file: pq.ParquetFile, group: int, names: Sequence[str]) -> Iterator[tuple[int, pa.Table]]:
+    """A row group with the number of its first row: whole, or in runs where it is larger than any of ours."""
+    import pyarrow as pa
+
+    if file.metadata.row_group(group).num_rows <= LARGEST:
+        yield 0, file.read_row_group(group, columns=names, use_threads=False)
+        return
+    begin = 0
+    for batch in file.iter_batches(GROUP_ROWS, [group], names, use_threads=False):
+        yield begin, pa.Table.from_batches([batch])
+        begin += batch.num_rows
 
 
 def _piece(path: Place, rows: Form, piece: Block, names: Container[str]) -> dict[str, np.ndarray]:
@@ -176,6 +191,11 @@ def _rows(file: pq.ParquetFile, edges: np.ndarray, here: range, names: Sequence[
     """A run of rows, from the row groups that hold it, whatever those are."""
     first = int(np.searchsorted(edges, here.start, side="right")) - 1
     end = int(np.searchsorted(edges, here.stop, side="left"))
+    if int(edges[end] - edges[first]) > len(here) + LARGEST:
+        raise EnsembleError(
+            f"its row groups of {int(edges[end] - edges[first]):,} rows are too large to be read; write it again with "
+            f"at most {GROUP_ROWS:,} rows in each"
+        )
     table = file.read_row_groups([*range(first, end)], columns=list(names), use_threads=False)
     return table.slice(here.start - int(edges[first]), len(here))
 
@@ -184,16 +204,18 @@ def _rows(file: pq.ParquetFile, edges: np.ndarray, here: range, names: Sequence[
 def _opened(path: Place, rows: Form) -> Iterator[pq.ParquetFile]:
     """A file whose columns and number of rows are as they must be; EnsembleError otherwise, or when it breaks."""
     import pyarrow as pa
-    import pyarrow.parquet as pq
 
     try:
-        with pq.ParquetFile(readable(path)) as file:
+        with _file(path, rows) as file:
             _expect_schema(path, file.schema_arrow, rows.schema)
             if file.metadata.num_rows != rows.total():
                 raise EnsembleError(
                     f"{path} is damaged: expected {rows.total()} rows ({rows.whole}), got {file.metadata.num_rows}"
                 )
+            _refuse_bombs(path, file, rows)
             yield file
+    except Bomb as error:
+        raise EnsembleError(f"{error}, or draw it again with --resume (resume=True)") from None
     except MemoryError as error:
         raise EnsembleError(
             f"{path} cannot be read in the memory there is ({_first_line(error) or 'none is left'}); give it more, or, "
@@ -203,6 +225,27 @@ def _opened(path: Place, rows: Form) -> Iterator[pq.ParquetFile]:
         raise EnsembleError(
             f"{path} is damaged: {_first_line(error)}; draw it again with --resume (resume=True)"
         ) from None
+
+
+def _file(path: Place, rows: Form) -> pq.ParquetFile:
+    import pyarrow.parquet as pq
+
+    try:
+        return pq.ParquetFile(readable(path), read_dictionary=rows.texts)
+    except KeyError:
+        raise EnsembleError(f"{path} is damaged: it has no column {rows.texts[0]}") from None
+
+
+def _refuse_bombs(path: Place, file: pq.ParquetFile, rows: Form) -> None:
+    """EnsembleError for a file whose pages hold more than belongs there; behind a URL it would ask too often."""
+    if isinstance(path, Path):
+        wanted = sum(rows.whole.rows if _is_list(field) else rows.total() for field in rows.schema)
+        found = refuse_bombs(path, file.metadata, rows.schema.names)
+        if found != wanted:
+            raise EnsembleError(
+                f"{path} is damaged: expected {wanted:,} values, got {found:,}; draw it again with "
+                "--resume (resume=True)"
+            )
 
 
 def _expect_schema(path: Place, found: pa.Schema, expected: pa.Schema) -> None:

@@ -73,6 +73,7 @@ def write(folder: Folder, spec: Any, whole: Block, identity: Mapping[str, Any]) 
     varied = Varied(spec)
     path_tables = _path_tables(varied, whole) if varied.parameters else iter(())
     series = series_table(varied)
+    _refuse_link(folder)
     for name, tables in ((PATHS, path_tables), (SERIES, iter(() if series is None else (series,)))):
         _refuse_foreign(folder, name)
         _write(folder, name, tables, identity)
@@ -89,6 +90,7 @@ def there(folder: Folder, spec: Any) -> bool:
 
 def remove(folder: Folder) -> None:
     """Remove the tables that are ours, and their folder when nothing else is in it."""
+    _refuse_link(folder)
     folder.remove([name for name in (PATHS, SERIES) if _is_ours(folder, name)])
     try:
         if isinstance(folder.path, Path):
@@ -127,6 +129,13 @@ def _is_ours(folder: Folder, name: str) -> bool:
         return IDENTITY in (pq.read_schema(readable(folder.path / name)).metadata or {})
     except (OSError, ValueError):
         return False
+
+
+def _refuse_link(folder: Folder) -> None:
+    """EnsembleError where what is written or removed in OUT would be so in another place."""
+    place = folder.path / FOLDER
+    if isinstance(place, Path) and place.is_symlink():
+        raise EnsembleError(f"{place} is a link to another place; remove it, or choose another OUT")
 
 
 def _refuse_foreign(folder: Folder, name: str) -> None:

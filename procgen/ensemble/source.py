@@ -5,6 +5,7 @@ from __future__ import annotations
 import importlib
 import json
 from collections.abc import Mapping, Sequence
+from dataclasses import replace
 from typing import Any, Protocol
 
 import numpy as np
@@ -79,10 +80,13 @@ class SpecSource:
 
 
 def read_spec(raw: Mapping[str, Any]) -> Any:
-    """The Spec that `raw` describes; SpecError with every fault."""
-    from procgen.terms.given import spec_of
+    """The Spec that `raw` describes, as a manifest has it: without the names of files. SpecError with every fault."""
+    from procgen.chance.laws import LAWS
+    from procgen.spec.reader import read_raw
+    from procgen.spec.tables import KEPT
+    from procgen.terms import catalogue
 
-    return spec_of(raw)
+    return replace(read_raw(dict(raw), catalogue(), LAWS, KEPT), file=None)
 
 
 def spec_source(raw: Mapping[str, Any], reveal: tuple[str, ...]) -> Source:

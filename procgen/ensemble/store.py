@@ -25,6 +25,8 @@ from procgen.ensemble.places import ONE_SLASH, Place, Remote, is_url, place_of, 
 MANIFEST = "manifest.json"
 PLAN = ".state/plan.json"
 PART = re.compile(r"(.+\.)?paths-\d{9,}-\d{9,}(\.steps-\d{9,}-\d{9,})?\.parquet")
+MOST_JSON = 32 << 20  # bytes: manifests of 20,000 parts, or of the longest specs, have 8 MB
+MOST_INSIDE = 1_000_000  # lists and objects in it
 PATIENCE = 3.0  # seconds: workers whose parent was killed are gone by then
 
 
@@ -92,7 +94,15 @@ class Folder:
         """A JSON object, or None when there is no such file; EnsembleError when it is anything else."""
         path = self.path / name
         try:
-            data = json.loads(path.read_text(encoding="utf-8"))
+            self._refuse_large(path)
+            text = path.read_text(encoding="utf-8")
+            if text.count("[") + text.count("{") > MOST_INSIDE:
+                raise EnsembleError(
+                    f"{path} has more than {MOST_INSIDE:,} lists and objects; it is damaged, or not ours"
+                )
+            data = json.loads(text)
+        except EnsembleError:
+            raise
         except FileNotFoundError:
             return None
         except NotADirectoryError:
@@ -104,6 +114,15 @@ class Folder:
         if not isinstance(data, dict):
             raise EnsembleError(f"{path} holds {type(data).__name__}, expected a JSON object")
         return data
+
+    def _refuse_large(self, path: Place) -> None:
+        """EnsembleError for what is not a file, or larger than any that is written here."""
+        if isinstance(path, Path) and path.exists() and not path.is_file():
+            raise EnsembleError(f"{path} is a folder or a device, expected a JSON file; choose another OUT")
+        if (size := path.stat().st_size) > MOST_JSON:
+            raise EnsembleError(
+                f"{path} has {size:,} bytes, at most {MOST_JSON:,} are read; it is damaged, or not ours"
+            )
 
     def refuse_file(self) -> None:
         """EnsembleError when a file was given where an ensemble is to be read."""
@@ -133,6 +152,8 @@ class Folder:
         """The state at the end of part `name`, or None when it is not there or damaged."""
         try:
             with np.load(readable(self.state / f"{name}.npz"), allow_pickle=False) as data:
+                if any(item.compress_type for item in data.zip.infolist()):  # ours are not, and could not grow
+                    return None
                 return dict(data)
         except Exception:  # a damaged archive shows in many ways; all of them mean: draw again
             return None
@@ -218,7 +239,7 @@ class Folder:
         while True:
             self.state.mkdir(parents=True, exist_ok=True)
             try:
-                descriptor = os.open(path, os.O_RDWR | os.O_CREAT, 0o666)
+                descriptor = os.open(path, os.O_RDWR | os.O_CREAT | getattr(os, "O_NOFOLLOW", 0), 0o666)
             except FileNotFoundError:
                 continue  # the previous holder removed the folder in between
             if _try_lock(descriptor):

@@ -17,11 +17,14 @@ from procgen.spec.domains import Reading
 from procgen.spec.draws import TableDraw
 from procgen.spec.model import Frozen
 from procgen.spec.named import Named
+from procgen.spec.pages import read_within
 from procgen.spec.tree import Tree, show_scalar
 from procgen.spec.words import did_you_mean, one_of, unquote
 
 TABLE = "from_table"
 MOST_VALUES = 50_000  # they become a part of the spec
+KEPT = "the spec in a manifest"  # as the file of a place: one from which no file is opened
+MOST_BYTES = 20 << 20  # of a table's file, and of its values in memory
 
 
 class Columns(dict[str, list[Any]]):
@@ -114,9 +117,17 @@ def read_file(tree: Tree, reader: Reading) -> Any:
     """Return the columns of the file named at `tree`, by name, or INVALID after reporting why it cannot be read."""
     if not isinstance(tree.value, str):
         return reader.expected(tree, "the path of a CSV or Parquet file")
+    if tree.place.file == KEPT:
+        reader.fault(tree, "expected the numbers themselves, as render keeps them, got the name of a file")
+        return INVALID
     beside = tree.place.file if tree.place.file and not tree.place.file.startswith("--") else None
     path = Path(beside or "").parent / tree.value
     try:
+        if path.exists() and not path.is_file():
+            reader.fault(
+                tree, f"expected a file, got a folder or a device at {path}; give the path of a CSV or Parquet file"
+            )
+            return INVALID
         columns = _parquet(path) if path.suffix == ".parquet" else _csv(path)
     except FileNotFoundError:
         folder = "the folder of the spec" if beside else "the current folder where no file of a spec has it"
@@ -153,6 +164,7 @@ def _is_number(value: Any) -> bool:
 
 
 def _csv(path: Path) -> Columns:
+    _refuse_large(path)
     with open(path, encoding="utf-8-sig", newline="") as file:
         lines = csv.reader(file)
         found = [(row, lines.line_num) for row in lines if row]
@@ -179,18 +191,23 @@ def _cell(text: str) -> Any:
     for kind in (int, float):
         try:
             value = kind(text)
-        except ValueError:
+            return value if math.isfinite(value) else text
+        except (ValueError, OverflowError):  # text, or a whole number beyond all floats
             continue
-        return value if math.isfinite(value) else text
     return text
 
 
-def _parquet(path: Path) -> Columns:
-    import pyarrow.parquet as pq
+def _refuse_large(path: Path) -> None:
+    size = path.stat().st_size
+    if size > MOST_BYTES:
+        raise ValueError(f"expected a file of at most {MOST_BYTES:,} bytes, got {size:,}; leave some of it out")
 
+
+def _parquet(path: Path) -> Columns:
     if not path.exists():
         raise FileNotFoundError(path)
-    columns = Columns(pq.read_table(path).to_pydict())
+    _refuse_large(path)
+    columns = Columns(read_within(path, None, MOST_BYTES).to_pydict())
     columns.rows = [f"row {i}" for i in range(1, 1 + max(map(len, columns.values()), default=0))]
     return columns
 

@@ -1,0 +1,184 @@
+"""What a Parquet file becomes when it is unpacked, told by the headers of its pages before any is.
+
+A footer may say anything, and a few bytes of a page may stand for gigabytes: a page is unpacked to the size that its
+own header says, and holds as many values. Pages and their headers: Apache Parquet, file format, and Apache Thrift,
+compact protocol.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Collection, Iterator, Sequence
+from pathlib import Path
+from typing import TYPE_CHECKING, Any, BinaryIO
+
+if TYPE_CHECKING:
+    import pyarrow as pa
+    import pyarrow.parquet as pq
+
+MOST_BYTES = 128 << 20  # of a page; usual writers make pages of 1 MB
+MOST_PAGES = 50_000  # besides one for each kB of the file
+_FIXED = {3: 1, 7: 8}  # bytes of a value by its Thrift type: a byte, a double
+_VARINTS = (4, 5, 6)
+_LONGEST = 10  # bytes of a varint of 64 bits
+_DEEPEST = 8
+_HEADERS = (256, 1 << 20)  # bytes of a header, of nearly all and of any
+_WIDEST = 64  # bytes of a value of fixed length: the widest decimals have 32
+
+
+class Bomb(ValueError):
+    """A file that is damaged, or grows out of all proportion when it is read; the message says where."""
+
+
+def read_within(path: Path, names: Sequence[str] | None, most: int) -> pa.Table:
+    """The columns of these names, or all, of a Parquet file of anyone's; Bomb where they take more than `most` bytes.
+
+    Texts that repeat are kept once while it is read, and their lengths added up before they are written out.
+    """
+    import pyarrow as pa
+    import pyarrow.compute as pc
+    import pyarrow.parquet as pq
+
+    with pq.ParquetFile(path) as file:
+        schema = file.schema_arrow
+    texts = [field.name for field in schema if _is_text(field.type)]
+    with pq.ParquetFile(path, read_dictionary=texts) as file:
+        names = schema.names if names is None else names
+        values = refuse_bombs(path, file.metadata, names)
+        _refuse_more(path, 8 * values, most)
+        table = file.read(columns=list(names), use_threads=False)
+    size = 0
+    for k, column in enumerate(table.columns):
+        if pa.types.is_dictionary(column.type) and table.column_names[k] in texts:
+            for chunk in column.chunks:
+                lengths = pc.take(pc.binary_length(chunk.dictionary), chunk.indices)
+                size += pc.sum(lengths).as_py() or 0
+            _refuse_more(path, size, most)
+            table = table.set_column(k, table.column_names[k], column.cast(column.type.value_type))
+    return table
+
+
+def _is_text(kind: pa.DataType) -> bool:
+    import pyarrow as pa
+
+    known = (pa.types.is_string, pa.types.is_binary, pa.types.is_large_string, pa.types.is_large_binary)
+    return any(test(kind) for test in known)
+
+
+def _refuse_more(path: Path, size: int, most: int) -> None:
+    if size > most:
+        raise Bomb(
+            f"{path} is refused: its {path.stat().st_size:,} bytes would become {size:,} in memory; if that is meant, "
+            "write it again without compression and dictionaries"
+        )
+
+
+def refuse_bombs(path: Path, found: pq.FileMetaData, names: Collection[str]) -> int:
+    """The values that the columns of these names hold, after looking at all of their pages.
+
+    Bomb where a page grows beyond MOST_BYTES, or holds more values than the footer says.
+    """
+    most, pages, values = MOST_PAGES + path.stat().st_size // 1000, 0, 0
+    of = [field.name for field in found.schema.to_arrow_schema() for _ in range(_leaves(field.type))]
+    with path.open("rb", buffering=0) as file:
+        for k in range(found.num_row_groups):
+            group = found.row_group(k)
+            for j in range(group.num_columns):
+                column = group.column(j)
+                if of[j] in names:
+                    begin = column.data_page_offset
+                    if column.has_dictionary_page and column.dictionary_page_offset:
+                        begin = min(begin, column.dictionary_page_offset)
+                    here = 0
+                    for size, count in _pages(file, begin, column.total_compressed_size):
+                        pages, here = pages + 1, here + count
+                        _refuse(path, column, found.schema.column(j).length, size, here, pages > most)
+                    values += here
+    return values
+
+
+def _leaves(kind: pa.DataType) -> int:
+    """Columns in the file that a column of this type is kept in."""
+    return sum(_leaves(kind.field(k).type) for k in range(kind.num_fields)) if kind.num_fields else 1
+
+
+def _refuse(path: Path, column: Any, widest: int, size: int, values: int, many: bool) -> None:
+    what = ""
+    if not 0 <= size <= MOST_BYTES:
+        what = f"a page of column {column.path_in_schema} would become {size:,} bytes, more than {MOST_BYTES:,}"
+    elif values > column.num_values:
+        what = f"column {column.path_in_schema} has more values than the {column.num_values:,} that its footer says"
+    elif many:
+        what = "it is cut into more pages than its size can fill"
+    elif column.physical_type == "FIXED_LEN_BYTE_ARRAY" and widest > _WIDEST:
+        what = f"column {column.path_in_schema} has values of {widest:,} bytes each"
+    if what:
+        raise Bomb(f"{path} is refused: {what}; write it again with pages of usual size")
+
+
+def _pages(file: BinaryIO, begin: int, length: int) -> Iterator[tuple[int, int]]:
+    """(bytes when unpacked, values) of each page of a column chunk; of dictionaries no values."""
+    end = begin + length
+    while 0 <= begin < end:
+        header, size = _header(file, begin)
+        packed, kind = header.get(3, -1), header.get(1, -1)
+        yield header.get(2, -1), 0 if kind == 2 else header.get(501, header.get(801, 0))
+        if packed < 0:
+            return
+        begin += size + packed
+
+
+def _header(file: BinaryIO, begin: int) -> tuple[dict[int, int], int]:
+    """The header that begins at a place of a file, and its length."""
+    for most in _HEADERS:
+        file.seek(begin)
+        data, found = file.read(most), dict[int, int]()
+        try:
+            return found, _struct(data, 0, 0, 0, found)
+        except IndexError:  # it goes on
+            if len(data) < most:
+                raise Bomb(f"{file.name} is damaged: it ends inside of a page") from None
+        except ValueError:
+            break
+    raise Bomb(f"{file.name} is damaged: a header of a page cannot be read")
+
+
+def _struct(data: bytes, at: int, place: int, depth: int, found: dict[int, int]) -> int:
+    """Add the whole numbers of a Thrift structure to `found`, by the numbers of their fields; where it ends.
+
+    A field of a structure within one has a hundred times the number of that one, and its own. All else is passed over.
+    """
+    number = 0
+    while head := data[at]:
+        at += 1
+        if head >> 4:
+            number += head >> 4
+        else:
+            number, at = _varint(data, at)
+            number = (number >> 1) ^ -(number & 1)
+        kind = head & 15
+        if kind in _VARINTS:
+            value, at = _varint(data, at)
+            found[place + number] = (value >> 1) ^ -(value & 1)
+        elif kind in _FIXED:
+            at += _FIXED[kind]
+        elif kind == 8:  # a text
+            value, at = _varint(data, at)
+            at += value
+        elif kind == 12 and depth < _DEEPEST:
+            at = _struct(data, at, 100 * (place + number), depth + 1, found)
+        elif kind not in (1, 2):  # true, false
+            raise ValueError("of another kind")
+    return at + 1
+
+
+def _varint(data: bytes, at: int) -> tuple[int, int]:
+    byte = data[at]
+    if byte < 128:
+        return byte, at + 1
+    value = 0
+    for k in range(_LONGEST):
+        byte = data[at + k]
+        value |= (byte & 127) << (7 * k)
+        if byte < 128:
+            return value, at + k + 1
+    raise ValueError("longer than a whole number")
