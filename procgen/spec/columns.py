@@ -17,10 +17,9 @@ import numpy as np
 
 from procgen.spec.declare import INVALID, Domain, Parameter, Reals, Schema, Text, Whole, mapping_of, read_each
 from procgen.spec.domains import Reading
-from procgen.spec.tables import MOST_VALUES, Columns, has_numbers, other_separator, read_file
+from procgen.spec.tables import MOST_VALUES, Columns, has_column, has_numbers, read_file
 from procgen.spec.tree import Tree
 from procgen.spec.units import parse_date
-from procgen.spec.words import did_you_mean, one_of
 
 MOST_PAST = 10_000  # numbers that a series can leave from: they are filtered one by one
 
@@ -90,7 +89,8 @@ class Column(Domain):
             return False
         table = read_file(tree.value["file"], reader) if table is None else table
         by = asked["step"] or asked["time"]
-        if table is INVALID or not all(has_column(table, name, tree, reader) for name in (asked["column"], by)):
+        file = tree.value["file"]
+        if table is INVALID or not all(has_column(table, name, file, reader) for name in (asked["column"], by)):
             return False
         steps = _steps(table, by, asked["time"] is not None, tree, reader, self.back)
         if not has_numbers(table, asked["column"], by, tree.value["file"], reader) or steps is None:
@@ -239,15 +239,6 @@ def _time_of(step: int, reader: Reading) -> str:
     return datetime.fromtimestamp(reader.grid.stamps(step, 1).tolist()[0] / 1e6, UTC).isoformat()
 
 
-def has_column(table: Columns, name: str, tree: Tree, reader: Reading) -> bool:
-    """Whether the table of the file named in `tree` has a column; False after reporting that it has not."""
-    if name in table:
-        return True
-    message = f"the table has no column {name}; it has {one_of(table)}; {did_you_mean(name, table)}"
-    reader.fault(tree.value["file"], message.rstrip("; ") + other_separator([*table]))
-    return False
-
-
 def table_of(tree: Tree, fields: Sequence[Parameter], reader: Reading) -> tuple[Columns, str] | None:
     """The table of a mapping of a file and one of its columns, and that column; None after reporting what is wrong."""
     before = len(reader.faults)
@@ -255,7 +246,7 @@ def table_of(tree: Tree, fields: Sequence[Parameter], reader: Reading) -> tuple[
     if len(reader.faults) > before:
         return None
     table = read_file(tree.value["file"], reader)
-    if table is INVALID or not has_column(table, asked["column"], tree, reader):
+    if table is INVALID or not has_column(table, asked["column"], tree.value["file"], reader):
         return None
     return table, asked["column"]
 
@@ -281,9 +272,7 @@ def _put(tree: Tree, found: dict[int, float], reader: Reading) -> bool:
     return True
 
 
-def _steps(
-    table: Columns, by: str, times: bool, tree: Tree, reader: Reading, back: int
-) -> Sequence[int | None] | None:
+def _steps(table: Columns, by: str, times: bool, tree: Tree, reader: Reading, back: int) -> Sequence[int | None] | None:
     """The step of each row, None for rows far behind the last step; or None after reporting what is none."""
     values, grid = table[by], reader.grid
     if not times:

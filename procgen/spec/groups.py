@@ -20,7 +20,7 @@ from procgen.spec.declare import INVALID, Body, Domain, Parameter, Reading, Sche
 from procgen.spec.entries import read_name
 from procgen.spec.model import Frozen, Series
 from procgen.spec.parameters import Known
-from procgen.spec.tables import read_file
+from procgen.spec.tables import has_column, read_file
 from procgen.spec.tree import NAME, Tree
 from procgen.spec.varying import Varying
 
@@ -165,6 +165,8 @@ def _inlined(tree: Tree, reader: Reading) -> Any:
         return INVALID
     if KEY not in columns:
         reader.fault(tree, f"the table has no column {KEY}, which names the series; it has {', '.join(columns)}")
+        return INVALID
+    if not all(has_column(columns, name, tree, reader) for name in columns if name):  # one without a name is not used
         return INVALID
     names = [str(name) for name in columns[KEY]]
     if len(set(names)) < len(names):

@@ -28,9 +28,13 @@ MOST_BYTES = 20 << 20  # of a table's file, and of its values in memory
 
 
 class Columns(dict[str, list[Any]]):
-    """The columns of a file by name; `rows` says of each row where it stands, for people: "line 7" or "row 6"."""
+    """The columns of a file by name; `rows` says of each row where it stands, for people: "line 7" or "row 6".
+
+    Of columns with one name the last is here, which nobody may take; `names` has all names as they stand in the file.
+    """
 
     rows: Sequence[str] = ()
+    names: Sequence[str] = ()
 
 
 class Values(Domain):
@@ -79,7 +83,7 @@ def _inlined(tree: Tree, values: dict[str, Any], column: str, reader: Reading) -
     """Return the tree of a table with its values in the place of the file."""
     key, name = values["key"], values["column"] or column
     table = read_file(tree.value["file"], reader)
-    if table is INVALID or not _has(table, (key, name), tree, reader):
+    if table is INVALID or not all([has_column(table, each, tree.value["file"], reader) for each in (key, name)]):
         return INVALID
     place = tree.value["file"].place
     if not has_numbers(table, name, key, tree.value["file"], reader):
@@ -105,12 +109,18 @@ def _twice(names: Sequence[str]) -> str:
     return next(name for i, name in enumerate(names) if name in names[:i])
 
 
-def _has(table: Columns, names: Sequence[str], tree: Tree, reader: Reading) -> bool:
-    for name in names:
-        if name not in table:
-            message = f"the table has no column {name}; it has {one_of(table)}; {did_you_mean(name, table)}"
-            reader.fault(tree.value["file"], message.rstrip("; ") + other_separator([*table]))
-    return all(name in table for name in names)
+def has_column(table: Columns, name: str, tree: Tree, reader: Reading) -> bool:
+    """Whether the table of the file at `tree` has one column of a name; False after reporting that it has not."""
+    if name not in table:
+        message = f"the table has no column {name}; it has {one_of(table)}; {did_you_mean(name, table)}"
+        reader.fault(tree, message.rstrip("; ") + other_separator([*table]))
+        return False
+    places = [str(k) for k, found in enumerate(table.names, 1) if found == name]
+    if len(places) > 1:
+        where = f"columns {', '.join(places[:-1])} and {places[-1]}"
+        message = f"the table has {len(places)} columns named {name!r}, {where}; rename or drop all but the one meant"
+        reader.fault(tree, message)
+    return len(places) == 1
 
 
 def read_file(tree: Tree, reader: Reading) -> Any:
@@ -175,7 +185,9 @@ def _csv(path: Path) -> Columns:
     if short is not None:
         what = f"line {ends[short]} has {len(rows[short])} cells, and there are {len(rows[0])} names"
         raise ValueError(what + other_separator(rows[0]))
-    columns = Columns({name.strip(): [_cell(row[i].strip()) for row in rows[1:]] for i, name in enumerate(rows[0])})
+    names = [name.strip() for name in rows[0]]
+    columns = Columns({name: [_cell(row[i].strip()) for row in rows[1:]] for i, name in enumerate(names)})
+    columns.names = names
     columns.rows = [f"line {end}" for end in ends[1:]]
     return columns
 
@@ -204,12 +216,15 @@ def _refuse_large(path: Path) -> None:
 
 
 def _parquet(path: Path) -> Columns:
+    import pyarrow.parquet as pq
+
     if not path.exists():
         raise FileNotFoundError(path)
     _refuse_large(path)
     columns = Columns(read_within(path, None, MOST_BYTES).to_pydict())
+    columns.names = pq.read_schema(path).names  # what is read has columns of one name side by side
     columns.rows = [f"row {i}" for i in range(1, 1 + max(map(len, columns.values()), default=0))]
     return columns
 
 
-__all__ = ["LOOKUP", "TABLE", "Frozen", "read_file", "read_lookup"]
+__all__ = ["LOOKUP", "TABLE", "Frozen", "has_column", "read_file", "read_lookup"]

@@ -4,6 +4,8 @@ import re
 
 import numpy as np
 import pandas as pd
+import pyarrow as pa
+import pyarrow.parquet as pq
 import pytest
 import yaml
 
@@ -374,3 +376,36 @@ def test_arrays_that_are_no_numbers_or_too_long_are_one_fault():
 
     assert len(said(np.arange(200_000.0))) == 1
     assert len(said(np.full(5, np.nan))) == 1
+
+
+@pytest.mark.parametrize("suffix", ["csv", "parquet"])
+@pytest.mark.parametrize(
+    ("name", "told"),
+    [
+        ("load", {"series": {"x": {"of": AR, "before": {**FILE, "step": "step"}}}}),
+        ("step", {"series": {"x": {"of": AR, "before": {**FILE, "step": "step"}}}}),
+        ("load", {"series": {"x": {"of": {"given": {"values": {**FILE, "step": "step"}}}}}}),
+        ("load", {"series": {"x": {"of": {"white_noise": {"sd": 1, "law": {"empirical": {"values": FILE}}}}}}}),
+        ("load", {"series": {"x": {"of": {"constant": {"from_table": {**FILE, "key": "series"}}}}}}),
+        ("load", {"groups": {"g": {"table": {"file": "h.csv"}, "of": {"constant": 1}}}}),
+    ],
+)
+def test_a_column_that_stands_twice_is_refused_wherever_it_is_used(tmp_path, suffix, name, told):
+    """The reader of `validate` says the same of a table of paths (tests/checks/test_files.py)."""
+    table = pd.DataFrame([[0, "x", 1.0, 2.0], [-1, "y", 3.0, 4.0]], columns=["step", "series", "load", "other"])
+    table = table.rename(columns={"other": "load"} if name == "load" else {"other": "load", "load": name})
+    if suffix == "csv":
+        table.to_csv(tmp_path / "h.csv", index=False)
+    else:
+        columns = [pa.array(table.iloc[:, k]) for k in range(4)]
+        pq.write_table(pa.Table.from_arrays(columns, names=list(table.columns)), tmp_path / "h.parquet")
+    text = yaml.safe_dump({**HEAD, **told}).replace("h.csv", f"h.{suffix}")
+    (tmp_path / "s.yaml").write_text(text, encoding="utf-8")
+    (said,) = faults(tmp_path / "s.yaml")
+    places = "3 and 4" if name == "load" else "1 and 3"
+    assert said == f"the table has 2 columns named '{name}', columns {places}; rename or drop all but the one meant"
+
+
+def test_a_name_that_stands_twice_and_is_not_used_does_no_harm(tmp_path):
+    (tmp_path / "h.csv").write_text("step,load,,\n-2,1,,\n-1,2,,\n")
+    assert pg.load(spec_file(tmp_path, {**FILE, "step": "step"})).series["x"].before == (1.0, 2.0)
