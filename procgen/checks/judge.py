@@ -129,9 +129,13 @@ class Sample:
         v = max(m2 - m1 * m1, 0.0)
         if v <= 0.0:
             return cls(n, m1, 0.0, 0.0, 0.0)
-        third = m3 - 3 * m1 * m2 + 2 * m1**3
-        fourth = m4 - 4 * m1 * m3 + 6 * m1 * m1 * m2 - 3 * m1**4
-        return cls(n, m1, math.sqrt(v * n / max(n - 1, 1)), third / v**1.5, fourth / v**2 - 3)
+        sd, size = math.sqrt(v * n / max(n - 1, 1)), math.sqrt(v)
+        third = m3 - 3 * m1 * m2 + 2 * m1 * m1 * m1
+        fourth = m4 - 4 * m1 * m3 + 6 * m1 * m1 * m2 - 3 * m1 * m1 * m1 * m1
+        skew, excess = third / size / v, fourth / v / v - 3
+        if not math.isfinite(skew + excess):  # powers that no number holds: a tail as long as any
+            skew, excess = math.inf, math.inf
+        return cls(n, m1, sd, skew, excess)
 
     @property
     def gap(self) -> float:

@@ -155,23 +155,23 @@ def _laws(gather: Gather, column: int) -> Iterator[Check]:
         if atoms_of(law.frozen):
             yield from special.lumps(plan.name, _at(plan, i), law.frozen, values[:, k], i, plan.grain)
             continue
-        z = (values[:, k] - law.mean) / law.sd
-        if plan.grain > 0.02 * law.sd / math.sqrt(len(values)):
-            z = z + plan.grain / law.sd * (np.random.default_rng(i).random(len(z)) - 0.5)
+        x = values[:, k]
+        if plan.grain > 0.02 * law.sd / math.sqrt(len(x)):
+            z = (x - law.mean + plan.grain * (np.random.default_rng(i).random(len(x)) - 0.5)) / law.sd
             plan.scores[i].room = plan.grain / law.sd
-            z = plan.scores[i].folded(z)
+            x = law.mean + law.sd * plan.scores[i].folded(z)
         if plan.grain > 0.5 * law.sd / len(values) ** 0.25:
             note = f"values are rounded to {plan.grain:g}, too coarse for the law"
             yield Check(plan.name, "law", _at(plan, i), "law", outcome="untestable", note=note)
             continue
-        note = f"Anderson–Darling, {len(z)} paths"
-        yield Check.of(plan.name, "law", _at(plan, i), "law", judge.anderson_darling(law.cdf(z)), note)
+        note = f"Anderson–Darling, {len(x)} paths"
+        yield Check.of(plan.name, "law", _at(plan, i), "law", judge.anderson_darling(law.frozen.cdf(x)), note)
         if plan.gaussian:
             continue
         for q in _QUANTILES:
-            below = int(np.count_nonzero(z < law.ppf(q)))
+            below = int(np.count_nonzero(x < law.frozen.ppf(q)))
             yield Check.of(
-                plan.name, f"share below the {q:.0%} quantile", _at(plan, i), "law", judge.share(below, len(z), q)
+                plan.name, f"share below the {q:.0%} quantile", _at(plan, i), "law", judge.share(below, len(x), q)
             )
 
 

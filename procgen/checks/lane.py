@@ -152,7 +152,8 @@ class Lane:
         pools = [np.zeros((0, 0)) if pool is None else pool.averages() for pool in self.pools]
         related = [relation.pool.averages() for relation in self.relations]
         self.sums.structure.watched(self.watches)
-        self.sums.finish_lane(self.first_path, self.probes, pools, self.prints.T.copy(), related)
+        with np.errstate(over="ignore", invalid="ignore"):  # of wide laws products overflow: they are not judged
+            self.sums.finish_lane(self.first_path, self.probes, pools, self.prints.T.copy(), related)
         for kind in ("shocks", "errors", "events", "squares", "cross"):
             for key, sums in getattr(self.sums, kind).items():
                 sums.finish(getattr(self, kind)[key])

@@ -56,6 +56,7 @@ class Moments:
         total, means, sums = self._joined(np.array([self.n]), self.mean[None], self.products[None], n, mean, products)
         self.n, self.mean, self.products = int(total[0]), means[0], sums[0]
 
+    @np.errstate(over="ignore", invalid="ignore")
     def _joined(
         self, n: NDArray, mean: NDArray, products: NDArray, m: NDArray, others: NDArray, more: NDArray
     ) -> tuple[NDArray, NDArray, NDArray]:
@@ -88,6 +89,7 @@ class Powers:
         self.ends = np.full((2, size), np.nan)  # the first path and the last one
         self.paths = 0
 
+    @np.errstate(over="ignore", invalid="ignore")  # of wide laws powers overflow: they are not judged
     def absorb(self, rows: NDArray) -> None:
         """Add statistics (paths, size) of the paths that follow."""
         if not rows.size:
@@ -104,6 +106,7 @@ class Powers:
         part.pairs, part.ends = _neighbours(np.where(known, rows, np.nan))
         self.merge(part)
 
+    @np.errstate(over="ignore", invalid="ignore")
     def merge(self, other: Powers) -> None:
         """Add the sums of the paths that follow."""
         self.n += other.n

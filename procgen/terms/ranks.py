@@ -14,6 +14,7 @@ import numpy as np
 from procgen.terms.base import Array, Node, Term, Unknown
 from procgen.terms.combine import Hidden
 from procgen.terms.graph import Graph, Source
+from procgen.terms.operators import Integrate
 from procgen.terms.recover import KnownParts, sources_below
 
 ROOT_12 = 3.4641016151377544
@@ -33,7 +34,9 @@ def ranking(graph: Graph, series: str, whole: bool, grain: float) -> Ranking | U
             hidden = [part for part in node.inputs if not isinstance(part, Source) and sources_below(graph, part)]
             if hidden:
                 return Unknown(f"{node.name} follows {hidden[0].name}, which moves by chance and is not seen")
+            sums = [over.name for over, _ in chain if isinstance(over.term, Integrate)]
             blurred = [over.name for over, _ in chain if over.term.blurs]
+            blurred += [] if whole else sums[1:]  # a second difference of numbers with digits is not exact
             if blurred:
                 return Unknown(f"{blurred[0]} gives {node.name} back only up to rounding, and its values have chances")
             return Ranking(graph, chain, node, whole, grain)
@@ -86,7 +89,7 @@ class Ranking:
                 return answer
             values, self._states[k] = answer
         self._step += len(at)
-        below, upto = values
+        below, upto = (np.where(lost, np.nan, end) for end in values)
         return ROOT_12 * (below + v * (upto - below) - 0.5)
 
     def _cell(self, values: Array) -> tuple[Array, Array]:
