@@ -244,11 +244,13 @@ class Job:
         if isinstance(self.folder.state, Path):
             engine.check_sees(str(self.folder.state.absolute()))
         if overwrite:
+            self.present.refuse_foreign()
             self.present.remove()
         self.columns = as_kept(self.columns, {} if overwrite else self.present.types())
         plan = self.present.chains(resume) or chains(
             self.whole, row_bytes(self.columns), engine.size, self.layout.widest
         )
+        self.present.refuse_strays(plan)
         there = self.present.records(plan)
         self.folder.clean_state(keep_plan=True)
         self.present.write_plan(plan, self.columns)

@@ -102,6 +102,18 @@ def footer(path: Place) -> tuple[dict[str, Any], dict[str, Any], pq.FileMetaData
         raise EnsembleError(f"{path} was not written by procgen render, or was changed since") from None
 
 
+def is_parquet(path: Place) -> bool:
+    """Whether a file can be read as Parquet, whoever wrote it."""
+    import pyarrow as pa
+    import pyarrow.parquet as pq
+
+    try:
+        pq.read_metadata(readable(path))
+    except (OSError, pa.ArrowException, ValueError):
+        return False
+    return True
+
+
 def _first_line(error: BaseException) -> str:
     return str(error).strip().partition("\n")[0]
 

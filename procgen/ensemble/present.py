@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Container, Mapping, Sequence
 from dataclasses import asdict
 from itertools import groupby
 from typing import Any
@@ -133,13 +133,37 @@ class Present:
         self._refuse_other(identity)
         return identity, nodes
 
+    def refuse_strays(self, plan: Sequence[Chain]) -> None:
+        """EnsembleError for Parquet files in OUT that are none of the plan's: readers of a folder would mix them in."""
+        planned = {file for chain in plan for part in chain for file in self._files(part)}
+        self.refuse_foreign(planned)
+        old = [name for name in self._ours() if name not in planned]
+        self._refuse_beside(old, "of another ensemble", "remove what is there with --overwrite (overwrite=True)")
+
+    def refuse_foreign(self, planned: Container[str] = ()) -> None:
+        """EnsembleError for Parquet files in OUT that are neither planned nor ours to remove."""
+        ours = self._ours()
+        others = [name for name in self.folder.tables() if name not in planned and name not in ours]
+        found = [name for name in others if parquet.is_parquet(self.folder.path / name)]
+        self._refuse_beside(found, "not ours", "move away what is not ours")
+
+    def _refuse_beside(self, names: Sequence[str], whose: str, mend: str) -> None:
+        if names:
+            named = ", ".join(names[:3]) + (f" and {len(names) - 3} more" if len(names) > 3 else "")
+            raise EnsembleError(
+                f"{self.folder.path} holds {named}, {whose}, which would be read among the parts of this one; choose "
+                f"another OUT, or {mend}"
+            )
+
     def remove(self) -> None:
         """Remove the ensemble that is there: files that it lists or that say that they are ours."""
-        listed = self._listed()
-        ours = [name for name in self.folder.part_files() if name in listed or self._is_ours(name)]
-        self.folder.remove([MANIFEST, *ours])
+        self.folder.remove([MANIFEST, *self._ours()])
         revealed.remove(self.folder)
         self.folder.clean_state(keep_plan=False)
+
+    def _ours(self) -> list[str]:
+        listed = self._listed()
+        return [name for name in self.folder.part_files() if name in listed or self._is_ours(name)]
 
     def _manifest(self) -> Manifest | None:
         data = self.folder.read_json(MANIFEST)

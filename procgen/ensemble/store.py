@@ -24,6 +24,7 @@ from procgen.ensemble.places import ONE_SLASH, Place, Remote, is_url, place_of, 
 
 MANIFEST = "manifest.json"
 PLAN = ".state/plan.json"
+TABLES = (".parquet", ".pq")
 PART = re.compile(r"(.+\.)?paths-\d{9,}-\d{9,}(\.steps-\d{9,}-\d{9,})?\.parquet")
 MOST_JSON = 32 << 20  # bytes: manifests of 20,000 parts, or of the longest specs, have 8 MB
 MOST_INSIDE = 1_000_000  # lists and objects in it
@@ -168,6 +169,14 @@ class Folder:
             return sorted(entry.name for entry in self.path.iterdir() if PART.fullmatch(entry.name))
         except FileNotFoundError:
             return []
+
+    def tables(self) -> list[str]:
+        """Names of the files in OUT that readers of a whole folder take for Parquet, whoever wrote them."""
+        try:
+            found = [entry for entry in self.path.iterdir() if entry.suffix.lower() in TABLES and entry.is_file()]
+        except FileNotFoundError:
+            return []
+        return sorted(entry.name for entry in found)
 
     def remove(self, names: list[str]) -> None:
         """Remove files of OUT, the manifest first, so that nothing that is left looks whole."""

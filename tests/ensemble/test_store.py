@@ -179,6 +179,35 @@ def test_files_of_others_are_never_touched(tmp_path):
     assert all(path.read_text() == "mine" for path in [*foreign, mine])
 
 
+def test_parts_of_an_older_ensemble_are_not_left_among_new_ones(tmp_path):
+    old = fake_render(fake_spec(paths=40, steps=5), tmp_path)
+    (tmp_path / "manifest.json").unlink()
+    (part,) = (tmp_path / one.file for one in old.manifest.parts)
+    written, fewer = part.read_bytes(), fake_spec(paths=4, steps=5)
+    for resume in (False, True):
+        with pytest.raises(EnsembleError, match=f"holds {part.name}, of another ensemble, .* another OUT, .*overwrite"):
+            fake_render(fewer, tmp_path, resume=resume)
+        assert visible(tmp_path) == [part.name] and part.read_bytes() == written and not (tmp_path / ".state").exists()
+    made = fake_render(fewer, tmp_path, overwrite=True)
+    assert visible(tmp_path) == ["manifest.json", made.manifest.parts[0].file]
+
+
+def test_a_parquet_file_of_others_is_told_before_anything_is_drawn_or_removed(tmp_path):
+    spec, mine = fake_spec(paths=20, steps=5), tmp_path / "measured.parquet"
+    made = fake_render(spec, tmp_path)
+    pd.DataFrame({"x": [1.0, 2.0]}).to_parquet(mine)
+    written = mine.read_bytes()
+    assert fake_render(spec, tmp_path).digest == made.digest  # nothing is drawn
+    with pytest.raises(EnsembleError, match=r"holds measured.parquet, not ours, .*; choose another OUT, or move away"):
+        fake_render(spec, tmp_path, seed=2, overwrite=True)
+    assert fake_check(tmp_path).ok and mine.read_bytes() == written
+    (tmp_path / "manifest.json").unlink()
+    (tmp_path / made.manifest.parts[0].file).unlink()
+    with pytest.raises(EnsembleError, match=r"holds measured\.parquet, not ours"):
+        fake_render(spec, tmp_path)
+    assert visible(tmp_path) == ["measured.parquet"] and mine.read_bytes() == written
+
+
 def test_a_manifest_of_others_is_not_removed(tmp_path):
     for text in ('{"name": "app"}', "[]", "not json"):
         (tmp_path / "manifest.json").write_text(text)
