@@ -143,6 +143,10 @@ class Table:
             return self._numbered(column, names.step) if numeric else self._timed(column)
         if names.time is not None:
             return self._timed(frame[names.time])
+        if names.path is None and len(frame) >= 2 * self.spec.time.steps:
+            where = f"{self.where} has {len(frame):,} rows, no column of paths and none of steps or times"
+            mend = f"{listed('path', names.found)}; {option('path')}, and steps with --step-col NAME"
+            raise TableError(f"{where}, where a path has {self.spec.time.steps:,} steps; {mend}")
         none = f"no column of steps or times: rows of a path are taken in their order; else {option('step')}"
         self._say("step order", none, "reported")
         order = np.argsort(path, kind="stable")

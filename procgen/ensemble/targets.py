@@ -64,10 +64,14 @@ class Csv(Target):
         self._file.write(head.getvalue().encode())
 
     def write(self, block: Block, table: pa.Table) -> None:
+        import pyarrow as pa
         import pyarrow.csv
 
         if self.time is not None and self.clock is not None:
             table = self.clock.replaced(table, self.time, block, self.clock.texts)
+        # A float32 in its own fewest digits is another number to a reader who takes them for a double.
+        wide = [field.with_type(pa.float64()) if field.type == pa.float32() else field for field in table.schema]
+        table = table.cast(pa.schema(wide, table.schema.metadata))
         options = pyarrow.csv.WriteOptions(include_header=False, quoting_style="none")  # ids and times need none
         pyarrow.csv.write_csv(table, self._file, options)
 

@@ -364,3 +364,9 @@ def test_steps_that_no_path_has_are_said_in_the_first_line(frame):
     assert verdict.agrees is True
     assert verdict.title.endswith(" (steps 40–59 are absent; judged on 40 steps)")
     assert "judged_on" in verdict.about and "absent" not in validate(frame, SPEC).title
+
+
+def test_rows_of_many_paths_are_not_taken_for_one(frame):
+    table = frame.rename(columns={"path": "run", "step": "hour"})
+    with pytest.raises(TableError, match="no column of paths and none of steps or times, where a path has"):
+        validate(table, SPEC)

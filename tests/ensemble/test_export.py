@@ -475,3 +475,11 @@ def test_a_table_of_parquet_keeps_types_and_units(tmp_path, demand):
     schema = pq.read_schema(demand.export(tmp_path / "x.parquet"))
     assert [str(kind) for kind in schema.types[2:]] == ["timestamp[us, tz=UTC]", "double", "double", "int64"]
     assert schema.field("tea").metadata[b"unit"] == b"kg" and not any(field.nullable for field in schema)
+
+
+def test_float32_reads_back_from_csv_as_it_is_stored(tmp_path):
+    raw = {"procgen": 1, "seed": 2, "paths": 3, "time": {"steps": 40}}
+    ensemble = pg.render(raw | {"series": {"x": {"of": [{"white_noise": {"sd": 1}}], "type": "float32"}}})
+    ensemble.export(tmp_path / "x.csv")
+    read = pd.read_csv(tmp_path / "x.csv")["x"].to_numpy()
+    np.testing.assert_array_equal(read, ensemble["x"].ravel())
