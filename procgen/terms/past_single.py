@@ -93,9 +93,18 @@ def _noise(entry: Entry, term: Any, name: str, e: Array) -> Told:
     if forgotten:
         return replace(entry, values=told), ()
     return replace(entry, values=told), (
-        f"the variance of {name} before the record: it is begun at its mean there, and the {len(e):,} shocks since are "
+        f"the variance of {name} before the record: it is begun at {_begun(term)}, and the {len(e):,} shocks since are "
         "too few for that to be forgotten",
     )
+
+
+def _begun(term: Any) -> str:
+    """Where a variance is begun before the record, in words."""
+    if isinstance(term, egarch.Egarch):
+        return "the mean of its logarithm there"
+    plain = isinstance(term, garch.Garch)
+    rest = 1.0 - sum(term.alpha) - sum(term.beta) if plain else 1.0 - term.persistence()
+    return "its mean there" if rest > 0.0 else f"{float(term.resting()):.5g} there, for its mean is infinite"
 
 
 def _variances(term: Any, e: Array) -> tuple[Array, bool]:

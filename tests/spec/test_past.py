@@ -291,6 +291,13 @@ def test_theory_says_what_it_leaves_from_and_what_could_not_be_conditioned(tmp_p
     assert told(tmp_path, [AR]) == {"values": 8, "last": 6.0, "unconditioned": []}
     (said,) = told(tmp_path, [{"garch": {"sd": 1, "alpha": 0.1, "beta": 0.8}}])["unconditioned"]
     assert said.startswith("the variance of x.garch before the record: it is begun at its mean there, and the 8 shocks")
+    endless = {"omega": 0.1, "alpha": 0.2, "beta": 0.8, "allow_infinite_variance": True}  # ω/(1 − β) is 0.5
+    (said,) = told(tmp_path, [{"garch": endless}])["unconditioned"]
+    assert "it is begun at 0.5 there, for its mean is infinite, and the 8 shocks since" in said
+    (said,) = told(tmp_path, [{"gjr_garch": {**endless, "alpha": 0.15, "gamma": 0.1}}])["unconditioned"]
+    assert "for its mean is infinite, and the 8 shocks since" in said
+    (said,) = told(tmp_path, [{"egarch": {"scale": 1, "gamma": 0, "alpha": 0.2, "beta": 0.99}}])["unconditioned"]
+    assert "it is begun at the mean of its logarithm there, and the 8 shocks since" in said
     tied = {"correlation": [{"between": ["x.ar", "y.ar"], "value": 0.5}]}
     raw = yaml.safe_load(spec_file(tmp_path, PAST).read_text(encoding="utf-8"))
     raw = {**raw, "series": {**raw["series"], "y": [AR]}, **tied}
