@@ -11,6 +11,10 @@ class EnsembleError(ValueError):
     """An ensemble that cannot be made, read or trusted; the message says why and how to mend it."""
 
 
+class Damaged(EnsembleError):
+    """A file of an ensemble is damaged, or is not one."""
+
+
 class InUse(EnsembleError):
     """Another process is drawing into the folder; it may be asked again."""
 

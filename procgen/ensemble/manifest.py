@@ -13,7 +13,7 @@ from typing import Any
 from procgen.ensemble import digest
 from procgen.ensemble import seal as seals
 from procgen.ensemble.columns import TYPES, Column
-from procgen.ensemble.errors import EnsembleError
+from procgen.ensemble.errors import Damaged
 from procgen.ensemble.layouts import Layout
 from procgen.ensemble.plan import Block
 from procgen.spec.tree import NAME, show_scalar
@@ -139,7 +139,7 @@ class Manifest:
                 raise ValueError("its digests and its columns name different series")
         except (KeyError, TypeError, AttributeError, ValueError) as error:
             reason = f"{error} is missing" if isinstance(error, KeyError) else error
-            raise EnsembleError(f"{where} is not a manifest of procgen, or is damaged: {reason}") from None
+            raise Damaged(f"{where} is not a manifest of procgen, or is damaged: {reason}") from None
         return manifest
 
 

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Container, Mapping, Sequence
+import contextlib
+from collections.abc import Container, Iterator, Mapping, Sequence
 from dataclasses import asdict
 from itertools import groupby
 from typing import Any
@@ -10,7 +11,7 @@ from typing import Any
 from procgen.ensemble import files, parquet, revealed
 from procgen.ensemble.check import Reader, Tick
 from procgen.ensemble.columns import Column
-from procgen.ensemble.errors import EnsembleError
+from procgen.ensemble.errors import Damaged, EnsembleError
 from procgen.ensemble.layouts import Layout
 from procgen.ensemble.manifest import Manifest, covers
 from procgen.ensemble.plan import Block, Chain
@@ -70,7 +71,7 @@ class Present:
         found = self._manifest()
         if found is not None and found.whole == self.whole:
             return _chains([part.block for part in found.parts])
-        plan = self.folder.read_json(PLAN)
+        plan = self._json(PLAN)
         if plan is None:
             return None
         self._refuse_other(plan.get("identity", {}))
@@ -98,7 +99,7 @@ class Present:
 
     def types(self) -> dict[str, str]:
         """The types of the columns that are there, by name; {} when nothing is."""
-        found, plan = self._manifest(), self.folder.read_json(PLAN)
+        found, plan = self._manifest(), self._json(PLAN)
         if found is not None:
             return {column.name: column.type for column in found.columns}
         if plan is None:
@@ -166,8 +167,13 @@ class Present:
         return [name for name in self.folder.part_files() if name in listed or self._is_ours(name)]
 
     def _manifest(self) -> Manifest | None:
-        data = self.folder.read_json(MANIFEST)
-        return None if data is None else Manifest.read(data, str(self.folder.path / MANIFEST))
+        data = self._json(MANIFEST)
+        with _mended():
+            return None if data is None else Manifest.read(data, str(self.folder.path / MANIFEST))
+
+    def _json(self, name: str) -> dict[str, Any] | None:
+        with _mended():
+            return self.folder.read_json(name)
 
     def _listed(self) -> set[str]:
         """Names of parts that the manifest or the plan in the folder lists, which makes them ours."""
@@ -175,7 +181,7 @@ class Present:
         mine = set()
         if found is not None:
             mine = {file for part in found.parts for file in found.layout.files(part.file, found.columns)}
-        return mine | set((self.folder.read_json(PLAN) or {}).get("files", ()))
+        return mine | set((self._json(PLAN) or {}).get("files", ()))
 
     def _is_ours(self, name: str) -> bool:
         try:
@@ -199,6 +205,18 @@ class Present:
                 f"{self.folder.path} holds an ensemble of another kind ({found}); "
                 f"choose another OUT, or remove that one with --overwrite (overwrite=True){command}"
             )
+
+
+@contextlib.contextmanager
+def _mended() -> Iterator[None]:
+    """Has what is damaged say what may be done, since it may be somebody else's and is not removed."""
+    try:
+        yield
+    except Damaged as error:
+        raise EnsembleError(
+            f"{error}; choose another OUT, or, if it is ours, remove it and render again with --overwrite "
+            "(overwrite=True)"
+        ) from None
 
 
 def _chains(blocks: Sequence[Block]) -> tuple[Chain, ...]:

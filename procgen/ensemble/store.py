@@ -19,7 +19,7 @@ from typing import Any
 
 import numpy as np
 
-from procgen.ensemble.errors import EnsembleError, InUse, system_sentence
+from procgen.ensemble.errors import Damaged, EnsembleError, InUse, system_sentence
 from procgen.ensemble.places import ONE_SLASH, Place, Remote, is_url, place_of, readable
 
 MANIFEST = "manifest.json"
@@ -98,9 +98,7 @@ class Folder:
             self._refuse_large(path)
             text = path.read_text(encoding="utf-8")
             if text.count("[") + text.count("{") > MOST_INSIDE:
-                raise EnsembleError(
-                    f"{path} has more than {MOST_INSIDE:,} lists and objects; it is damaged, or not ours"
-                )
+                raise Damaged(f"{path} has more than {MOST_INSIDE:,} lists and objects; it is damaged, or not ours")
             data = json.loads(text)
         except EnsembleError:
             raise
@@ -111,9 +109,9 @@ class Folder:
         except OSError as error:
             raise EnsembleError(system_sentence(error, f"reading {path}")) from None
         except (ValueError, RecursionError) as error:
-            raise EnsembleError(f"{path} is not JSON ({error}); it is damaged, or not ours") from None
+            raise Damaged(f"{path} is not JSON ({error}); it is damaged, or not ours") from None
         if not isinstance(data, dict):
-            raise EnsembleError(f"{path} holds {type(data).__name__}, expected a JSON object")
+            raise Damaged(f"{path} holds {type(data).__name__}, expected a JSON object")
         return data
 
     def _refuse_large(self, path: Place) -> None:
@@ -121,9 +119,7 @@ class Folder:
         if isinstance(path, Path) and path.exists() and not path.is_file():
             raise EnsembleError(f"{path} is a folder or a device, expected a JSON file; choose another OUT")
         if (size := path.stat().st_size) > MOST_JSON:
-            raise EnsembleError(
-                f"{path} has {size:,} bytes, at most {MOST_JSON:,} are read; it is damaged, or not ours"
-            )
+            raise Damaged(f"{path} has {size:,} bytes, at most {MOST_JSON:,} are read; it is damaged, or not ours")
 
     def refuse_file(self) -> None:
         """EnsembleError when a file was given where an ensemble is to be read."""
