@@ -164,6 +164,7 @@ class _Writer:
         name, rest = steps[0], steps[1:]
         written = tree.value if tree.is_map else {}
         if not isinstance(name, str) or not (name in written or (name in allowed and tree.is_map)):
+            self._of_file(tree, name, tree.place.path)
             raise self._nowhere(tree.place.path, name, [*written, *(a for a in allowed if a not in written)], rest)
         path = step_into(tree.place.path, name)
         if not rest:
@@ -187,6 +188,13 @@ class _Writer:
         if way == self._plain and all(isinstance(step, int) for step in rest):  # a list of numbers that is now another
             here = replace(made.place, path=here.path)
         return Tree((*tree.value[:i], made, *tree.value[i + 1 :]), here)
+
+    def _of_file(self, tree: Tree, name: Step, path: str) -> None:
+        """Nowhere for a key of what stood where the numbers of a file do now."""
+        written = tree.origin[0].value if tree.origin is not None else {}
+        if name in written:
+            keys = ", ".join(f"{key}: …" for key in written)
+            raise Nowhere(f"{path} has the numbers of its file by now; set the whole of it, as in {path}={{{keys}}}")
 
     def _nowhere(self, path: str, name: Step, there: Sequence[str], rest: Steps) -> Nowhere:
         near = None if rest else nearest(name, there)

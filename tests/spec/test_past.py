@@ -44,6 +44,18 @@ def test_a_file_is_read_up_to_the_step_before_step_0_whatever_its_order(tmp_path
     assert pg.load(spec.raw).digest() == spec.digest()  # it needs the file no more
 
 
+@pytest.mark.parametrize("place", ["file", "column", "step"])
+def test_what_a_file_was_named_by_is_set_as_a_whole(tmp_path, place):
+    for name, first in (("h.csv", -9), ("g.csv", -4)):
+        days("2027-03-01", 9).assign(step=range(first, first + 9)).to_csv(tmp_path / name, index=False)
+    told = {**FILE, "step": "step"}
+    spec = pg.load(spec_file(tmp_path, told, of=[{"given": {"values": {**told, "file": "g.csv"}}}, AR]))
+    for at in ("before", "given.values"):
+        says = rf"has the numbers of its file by now; set the whole of it, as in series.*{at}=.column: …, file: …, step"
+        with pytest.raises(pg.SpecError, match=says):
+            spec.set({f"series.x.{at}.{place}": "other"})
+
+
 def test_a_file_by_step_is_as_the_list(tmp_path):
     pd.DataFrame({"step": [-3, -2, -1, 0], "load": [7.0, 8.5, 9.0, 1.0]}).to_csv(tmp_path / "h.csv", index=False)
     spec = pg.load(spec_file(tmp_path, {**FILE, "step": "step"}))
