@@ -151,7 +151,11 @@ class _Departure:
                 if inner.values.get("before") is not None:
                     _refuse(inner.place, f"{where} has a `before` of its own, and so has the series; remove one")
             if entry.kind == "use":
-                _refuse(entry.place, f"what {self.name} uses has a state that others may see; write its terms here")
+                _refuse(
+                    entry.place,
+                    f"what {self.name} uses has a state that others may see; write its terms here, or leave before out "
+                    f"at {self.name}",
+                )
             if entry.times == 0.0:
                 _refuse(entry.place, f"{where} is multiplied by 0, and its past is lost; take it out")
         apart = [(e, n) for e, n in self.random if part_of(e, n) is None]

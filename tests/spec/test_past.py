@@ -218,7 +218,10 @@ PAST = [3.0, 1.0, 4.0, 1.0, 5.0, 9.0, 2.0, 6.0]
         ),
         ([AR, {"garch": {"sd": 1, "alpha": 0.1, "beta": 0.8}}], r"parts apart: .* got x.garch \(garch\); leave before"),
         ([AR, {"integrate": [{"ma": {"theta": 0.5, "sd": 1}}]}], r"parts apart: .* got x.integrate \(integrate\)"),
-        ([{"use": "both"}, {"white_noise": {"sd": 1}}], r"what x uses has a state that others may see; write its"),
+        (
+            [{"use": "both"}, {"white_noise": {"sd": 1}}],
+            r"what x uses has a state that others may see; write its .* before out at x",
+        ),
         ([{**AR, "times": 0}], r"x.ar \(ar\) is multiplied by 0, and its past is lost; take it out"),
         (
             [{"seasonal_random_walk": {"period": 9, "sd": 1}}, AR],
