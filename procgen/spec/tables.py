@@ -163,7 +163,8 @@ def has_numbers(table: Columns, name: str, by: str | None, tree: Tree, reader: R
         return True
     value, whose = table[name][wrong[0]], f", where {by} is {table[by][wrong[0]]}" if by else ""
     others = f"; {len(wrong) - 1} other rows have none either" if len(wrong) > 2 else "; one other row has none either"
-    hint = "fill what is empty, or take such rows out" if value in ("", None) else unquote(value) or "mend the table"
+    hint = unquote(str(value)) if isinstance(value, str | float) else ""
+    hint = "fill what is empty, or take such rows out" if value in ("", None) else hint or "mend the table"
     message = f"expected a number, got {show_scalar(value)} in column {name} on {table.rows[wrong[0]]}{whose}"
     reader.fault(tree, message + (others if len(wrong) > 1 else "") + f"; {hint}")
     return False

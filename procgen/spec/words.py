@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import difflib
+import math
 from collections.abc import Iterable
 
 
@@ -64,7 +65,8 @@ def unquote(value: object) -> str:
     if not isinstance(value, str) or len(value) > 40:
         return ""
     try:
-        float(value)
+        if not math.isfinite(float(value)):
+            return "it must be finite: give the number itself, or take it out"
     except ValueError:
         try:
             float(value.replace(",", "."))

@@ -167,6 +167,10 @@ def without(table, *rows):
             days("2027-03-01", 9).replace("2027-03-05", "2027-03-05T11:00"),
             r"no step is at 2027-03-05T11:00 \(line 6\), the nearest, step -5, is at 2027-03-05T00:00:00 in UTC; take",
         ),
+        (
+            days("2027-03-01", 9).replace(5.0, np.inf),
+            r'got "inf" in column load on line 6, .*; it must be finite: give',
+        ),
         (pd.concat([days("2027-03-01", 9)] * 2), r"the table has two rows for step -9; keep one"),
         (days("2027-03-01", 9).rename(columns={"load": "lode"}), r"the table has no column load; .* did you mean lode"),
         (days("2027-03-01", 9).replace("2027-03-05", "last friday"), r"expected a date, or a date and time, in column"),
