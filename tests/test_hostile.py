@@ -112,6 +112,17 @@ SPECS = {
     "label": (HEAD + "series: {x: [{constant: 1, as: ../y}]}\n", NAME),
     "variant": (HEAD + "series: {x: {constant: 1}}\nvariants: {../y: {seed: 2}}\n", NAME),
     "device": (HEAD + "series: {x: {given: {file: /dev/zero, column: x, step: step}}}\n", "got a folder or a device"),
+    "outputs": (
+        HEAD + "shared: {m: [{vector_arma: {names: [low, mid,$high], phi: [[[0.5]]], sd: [1]}}]}\n"
+        "series: {x: [{use: m.vector_arma.low}]}\n",
+        "expected",
+    ),
+    "no value": (
+        HEAD + "shared: {m: {chain: {states: [a, b], durations: {a: 5, b: 3}}}}\n"
+        "series: {x: [{ar: {phi: 0.5, sd: 1}}], y: [{ar: {phi: 0.5, sd: 1}}]}\n"
+        "correlation: [{between: [x.ar, y.ar], by: m, valu: {a: 0.1, b: 0.2}}]\n",
+        "expected a value for each state of m",
+    ),
     "kind": (HEAD + 'series: {x: {"\\u202e[red]": 1}}\n', "unknown term ‹U+202E›[red]"),
 }  # fmt: skip
 

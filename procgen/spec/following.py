@@ -56,7 +56,9 @@ def states_in(tree: Tree, values: Mapping[str, Any], links: Links, reader: Readi
         reader.fault(place, str(error))
         return None
     if not stated:
-        reader.fault(given[0][0], f"expected a value for each state of {by}, as in {{calm: 0.2, storm: 0.8}}")
+        reader.fault(
+            given[0][0] if given else tree, f"expected a value for each state of {by}, as in {{calm: 0.2, storm: 0.8}}"
+        )
         return None
     if values.get("repair"):
         reader.fault(tree.value["repair"], "a matrix by state is not repaired; write one that is a correlation")

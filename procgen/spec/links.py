@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 
+from procgen.spec.declare import INVALID
 from procgen.spec.domains import Reading
 from procgen.spec.entries import children, named, walk
 from procgen.spec.model import Entry, Place, Series, Shared
@@ -72,7 +73,8 @@ class Links:
     def outputs(self, entry: Entry) -> list[str]:
         """Return the hidden outputs that go by an entry's label: its own, and those of its unnamed shock."""
         kind = self.reader.catalogue.get(entry.kind)
-        found = [] if kind is None else list(kind.outputs_of(entry.values))
+        read = {key: value for key, value in entry.values.items() if value is not INVALID}
+        found = [] if kind is None else list(kind.outputs_of(read))
         if entry.shock is not None and not named(entry.shock):
             found += self.outputs(entry.shock)
         return found

@@ -256,10 +256,14 @@ def _syntax(error: yaml.YAMLError, file: str | None, text: str) -> Fault:
 
 def _unquoted(lines: list[str], column: int) -> str | None:
     """Return the name with brackets or braces, as in series.load[0].ar.phi, that a parser stumbles over at a column."""
-    found = (match for line in lines for match in _BRACKETED.finditer(line) if match.start() < column <= match.end())
+    begin = max(column - _NEAR, 0)  # long lines are not looked through: their repeats would take hours
+    near = [line[begin : column + _NEAR] for line in lines]
+    column -= begin
+    found = (match for line in near for match in _BRACKETED.finditer(line) if match.start() < column <= match.end())
     return next((match[0].rstrip(".") for match in found), None)
 
 
+_NEAR = 200  # letters
 _INDEX = r"[\[{]\s*\w+\s*[\]}]"
 _BRACKETED = re.compile(rf"[\w.]+(?:{_INDEX}[\w.]*)+|{_INDEX}[\w.]+(?:{_INDEX}[\w.]*)*")
 _PLAIN_WORDS = {
