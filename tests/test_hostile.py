@@ -12,6 +12,7 @@ import re
 import shutil
 import subprocess
 import sys
+import tempfile
 import time
 from functools import cache
 
@@ -36,7 +37,9 @@ from tests.studies.hostile import MEGABYTES, OBEYED, SECONDS, SPEC
 HEAD = "seed: 1\npaths: 10\ntime: {steps: 20}\n"
 HEAD_RAW = {"seed": 1, "paths": 10, "time": {"steps": 20}, "series": {"x": [{"white_noise": {"sd": 1}}]}}
 CHILD = """
-import resource, sys
+import atexit, pathlib, resource, sys
+peak = pathlib.Path(sys.argv.pop(1))  # of this program: what getrusage tells counts the one that started it, too
+atexit.register(lambda: peak.write_bytes(pathlib.Path("/proc/self/status").read_bytes()))
 resource.setrlimit(resource.RLIMIT_AS, (6 << 30, 6 << 30))
 from procgen.cli import main
 main()
@@ -45,12 +48,15 @@ main()
 
 def command(*arguments, cwd=None):
     """Exit code, what was printed, processor seconds and peak MB of a command in a process of its own."""
-    words = [sys.executable, "-c", CHILD, *map(str, arguments)]
-    with subprocess.Popen(words, stdout=subprocess.PIPE, stderr=subprocess.STDOUT, cwd=cwd) as process:
-        said = process.stdout.read().decode("utf-8", "replace")
-        _, status, used = os.wait4(process.pid, 0)
-        process.returncode = os.waitstatus_to_exitcode(status)
-    return process.returncode, said, used.ru_utime + used.ru_stime, used.ru_maxrss / 1024
+    with tempfile.TemporaryDirectory() as folder:
+        peak = Path(folder) / "peak"
+        words = [sys.executable, "-c", CHILD, str(peak), *map(str, arguments)]
+        with subprocess.Popen(words, stdout=subprocess.PIPE, stderr=subprocess.STDOUT, cwd=cwd) as process:
+            said = process.stdout.read().decode("utf-8", "replace")
+            _, status, used = os.wait4(process.pid, 0)
+            process.returncode = os.waitstatus_to_exitcode(status)
+        most = re.search(r"VmHWM:\s*(\d+) kB", peak.read_text(encoding="ascii"))
+        return process.returncode, said, used.ru_utime + used.ru_stime, int(most[1]) / 1024
 
 
 @cache

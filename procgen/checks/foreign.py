@@ -145,7 +145,7 @@ class Table:
             return self._timed(frame[names.time])
         if names.path is None and len(frame) >= 2 * self.spec.time.steps:
             where = f"{self.where} has {len(frame):,} rows, no column of paths and none of steps or times"
-            mend = f"{listed('path', names.found)}; {option('path')}, and steps with --step-col NAME"
+            mend = f"{listed('path', names.found)}; {option('path')}; {option('step')}"
             raise TableError(f"{where}, where a path has {self.spec.time.steps:,} steps; {mend}")
         none = f"no column of steps or times: rows of a path are taken in their order; else {option('step')}"
         self._say("step order", none, "reported")

@@ -4,7 +4,7 @@ import json
 
 from hypothesis import strategies as st
 
-from procgen.spec.columns import Column
+from procgen.spec.columns import Column, Undated
 from procgen.spec.declare import (
     REQUIRED,
     Body,
@@ -60,6 +60,7 @@ def valid(domain, laws):
         CalendarDays: st.just(["2027-12-24", "02-29"]),
         EveryYear: st.just("07-15"),
         Column: st.just([3, 5, 4]) | st.just({"first": -1, "numbers": [1, 2.5, 3]}),
+        Undated: st.just([3, 5, 4]),
         Sample: st.just([3, 5, 4]) | st.just({"numbers": [1, 2.5, 3]}),
         Smoothing: st.booleans() | st.just(0.3),
         Matrices: st.just([[0.5, 0.1], [0, 0.3]]) | st.just([[[0.5, 0], [0, 0.3]], [[0.1, 0], [0, 0.2]]]),

@@ -117,18 +117,20 @@ def test_what_is_finite_and_not_worked_out_is_not_said_to_have_no_closed_form():
 
 
 @pytest.mark.parametrize(
-    "body",
+    ("body", "values", "chances"),
     [
-        {"min": {"of": [{"flag": {"share": 0.2, "stay": 8}}], "and": [{"constant": 0.5}]}},
-        {"clip": {"of": [{"poisson": {"mean": 3}}], "high": 2}},
+        ({"min": {"of": [{"flag": {"share": 0.2, "stay": 8}}], "and": [{"constant": 0.5}]}}, [0.0, 0.5], [0.8, 1.0]),
+        ({"clip": {"of": [{"poisson": {"mean": 3}}], "high": 2}}, [0.0, 1.0, 2.0], [*stats.poisson(3).cdf([0, 1]), 1]),
     ],
 )
-def test_a_bend_of_counts_is_not_worked_out_which_is_not_to_have_no_closed_form(body):
+def test_moments_of_a_bend_of_counts_are_not_worked_out_and_its_law_is(body, values, chances):
     x = series_of(body)
     assert x.mean(NOW) is None and "not worked out" in x.reason("mean")
-    assert x.marginal(0) is None and x.reason("marginal")
+    np.testing.assert_allclose(x.marginal(0).cdf(np.array(values)), chances, rtol=1e-12)
 
 
-def test_the_law_of_a_bend_of_what_is_skewed_has_the_reason_of_its_moments():
+def test_the_law_of_a_bend_of_what_is_skewed_is_known_though_its_moments_are_not():
     x = series_of({"clip": {"of": [{"white_noise": {"sd": 1, "law": "laplace"}}], "high": 2}})
-    assert x.marginal(0) is None and "not worked out" in x.reason("marginal")
+    at = np.array([-1.0, 0.5, 1.9, 2.0])
+    exact = np.where(at < 2.0, stats.laplace(scale=np.sqrt(0.5)).cdf(at), 1.0)
+    np.testing.assert_allclose(x.marginal(0).cdf(at), exact, rtol=1e-9)
