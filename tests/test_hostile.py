@@ -15,6 +15,7 @@ import sys
 import tempfile
 import time
 from functools import cache
+from pathlib import Path
 
 import numpy as np
 import pyarrow as pa
