@@ -102,8 +102,12 @@ def _begun(term: Any) -> str:
     """Where a variance is begun before the record, in words."""
     if isinstance(term, egarch.Egarch):
         return "the mean of its logarithm there"
-    plain = isinstance(term, garch.Garch)
-    rest = 1.0 - sum(term.alpha) - sum(term.beta) if plain else 1.0 - term.persistence()
+    if isinstance(term, garch.Garch):
+        rest = 1.0
+        for weight in (*term.alpha, *term.beta):
+            rest -= weight
+    else:
+        rest = 1.0 - term.persistence()
     return "its mean there" if rest > 0.0 else f"{float(term.resting()):.5g} there, for its mean is infinite"
 
 
