@@ -16,7 +16,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from procgen.checks.blocks import compiled, in_one_pass
+from procgen.checks.blocks import compiled, in_one_pass, scratch
 from procgen.checks.verdict import Check
 
 STUCK, COPIED = "values that stay", "copied stretches"
@@ -165,7 +165,7 @@ class Watch:
         some, paths = np.empty(len(x), dtype=np.int64), x.shape[1]
         in_one_pass("stays", self.before, x, some)
         self._follow(x, some)
-        room = Marks(*(np.empty(x.size, each.dtype) for each in self.marks.arrays))
+        room = Marks(*(scratch(1, x.size, 5 + k)[0].view(each.dtype) for k, each in enumerate(self.marks.arrays)))
         mixed, where, counted = np.empty((3, paths), np.uint64), np.empty(paths, np.int64), np.empty(1, np.int64)
         in_one_pass("marked", self.before, x, self.ends, _MIX, *room.arrays, mixed, where, counted)
         count = int(counted[0])

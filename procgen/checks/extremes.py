@@ -48,16 +48,18 @@ class Reach:
         first_step: int,
         known: Sequence[Far],
         ends: tuple[NDArray, NDArray] | None = None,
+        least: float = 0.0,
     ) -> list[Far]:
         """The KEPT farthest of those known and the values of a tile (steps, paths); what is not finite is left out.
 
-        `ends` (steps,): the least and the largest value of each step, where they are known.
+        `ends` (steps,): the least and the largest value of each step, where they are known; of sizes below `least`
+        none is wanted.
         """
         mean, sd = self._at(first_step, len(x))
         with np.errstate(invalid="ignore", divide="ignore", over="ignore"):
             low, high = ends or (np.fmin.reduce(x, axis=1), np.fmax.reduce(x, axis=1))
             worst = np.maximum(high - mean, mean - low) / sd
-            least = max(_LEAST, known[-1][0]) if len(known) == KEPT else _LEAST
+            least = max(_LEAST, least, known[-1][0] if len(known) == KEPT else 0.0)
             rows = np.flatnonzero(worst >= least)
             if not rows.size:
                 return list(known)

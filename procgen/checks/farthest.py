@@ -21,7 +21,7 @@ from procgen.checks.verdict import Check
 from procgen.checks.words import FARTHEST_SHOCK, number
 
 KEPT = 32  # shocks of a series
-_LEAST = 3.0  # normal scores, below which a shock is of no interest
+LEAST = 3.0  # normal scores, below which a shock is of no interest
 _OUTSIDE = math.log(0.05)  # of a shock that is farther out than all N should be
 _APART = 1.2  # times as far as the farthest of N should be
 _SPAN = 12  # steps of a path in which the shocks lie that one wrong value makes
@@ -40,13 +40,14 @@ def farthest(
     first_step: int,
     known: Sequence[Far],
     worst: NDArray | None = None,
+    least: float = LEAST,
 ) -> list[Far]:
     """The KEPT farthest of those known, of earlier steps, and a tile (steps, paths) of scores g, shocks z, values x.
 
-    Of scores of one size the earlier are kept. `worst` (steps,): the largest size of each step, where it is known.
+    Of scores of one size the earlier are kept. `worst` (steps,): the largest size of each step, where it is known; only
+    scores larger than `least` are wanted.
     """
-    full = len(known) == KEPT
-    least = max(_LEAST, known[-1][0]) if full else _LEAST
+    least = max(least, known[-1][0]) if len(known) == KEPT else least
     with np.errstate(invalid="ignore"):
         if worst is None:
             worst = np.fmax(np.fmax.reduce(g, axis=1), -np.fmin.reduce(g, axis=1))
@@ -78,7 +79,7 @@ def checks(
     room = 10.0 * math.sqrt(noise) if noise or ranks or scores.gaussian else scores.room
     nearer = _log_nearer(scores, known, room, n)
     if not known:
-        yield _cut(series, nearer, _LEAST, n)
+        yield _cut(series, nearer, LEAST, n)
         return
     logs = [judge.of_many(math.log(2.0) + _log_tail(scores, far, room), n) for far in known]
     best = int(np.argmin(logs))
@@ -125,7 +126,7 @@ def _log_nearer(scores: Scores, known: Sequence[Far], room: float, n: int) -> fl
     """log of (1 − 2a)^n: that none of n is farther out than the farthest, or, if none is known, than the least."""
     from scipy.special import log_ndtr
 
-    tail = math.exp(float(log_ndtr(-_LEAST)))
+    tail = math.exp(float(log_ndtr(-LEAST)))
     if known and scores.gaussian:
         tail = math.exp(float(log_ndtr(-abs(known[0][3]) - room)))
     elif known:

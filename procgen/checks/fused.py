@@ -14,6 +14,7 @@ import numpy as np
 from procgen.chance.kernel import compiled_function
 
 BLOCK, STRETCH = 64, 16  # steps, as in `blocks` and `stretches`
+SOME = 64  # paths whose marks are looked for at once
 _SIZE = np.int64(2**63 - 1)  # all bits of a double but its sign
 _STEEP, _FALL = 6 * np.sqrt(5.0), 0.5 * np.sqrt(5.0)  # of `cluster_scores`
 _part = partial(compiled_function, inline="always")
@@ -188,14 +189,16 @@ def marked(before, x, ends, mix, hashes, values, paths, steps, mixed, where, fou
     for t in range(-2, x.shape[0]):
         bits = (x[t] if t >= 0 else before[reach + t]).view(np.uint64)
         one, two, three = mixed[t % 3], mixed[(t - 1) % 3], mixed[(t - 2) % 3]
-        for p in range(lanes):
-            one[p] = bits[p] * mix[0]
-        if t < 0:
-            continue
         found = 0
-        for p in range(lanes):
-            where[found] = p
-            found += one[p] ^ (two[p] >> np.uint64(1)) ^ (three[p] >> np.uint64(2)) <= ends
+        for begin in range(0, lanes, SOME):
+            end, any_here = min(begin + SOME, lanes), False
+            for p in range(begin, end):
+                one[p] = bits[p] * mix[0]
+                any_here |= one[p] ^ (two[p] >> np.uint64(1)) ^ (three[p] >> np.uint64(2)) <= ends
+            if any_here and t >= 0:  # of so few, as a rule there is none
+                for p in range(begin, end):
+                    where[found] = p
+                    found += one[p] ^ (two[p] >> np.uint64(1)) ^ (three[p] >> np.uint64(2)) <= ends
         for k in range(found):
             p = where[k]
             first = x[t - reach, p] if t >= reach else before[t, p]

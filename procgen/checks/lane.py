@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.chance import kernel
-from procgen.checks import missing
+from procgen.checks import extremes, farthest, missing
 from procgen.checks.blocks import BLOCK
 from procgen.checks.gather import Gather, Plan
 from procgen.checks.pools import PoolLane
@@ -170,6 +170,29 @@ def _tile(rest: NDArray | None, values: NDArray, at: int, count: int) -> NDArray
     return tile
 
 
+class Outmost:
+    """The values and shocks farthest out of the paths summed so far: of other paths only what is farther matters."""
+
+    def __init__(self) -> None:
+        self.values: dict[str, list[extremes.Far]] = {}
+        self.shocks: dict[str, list[farthest.Far]] = {}
+
+    def take(self, sums: Gather) -> None:
+        """Know those of the sums of a range of paths."""
+        for name, values in sums.structure.far.items():
+            self.values[name] = extremes.merged([*self.values.get(name, ()), *values])
+        for name, each in sums.shocks.items():
+            self.shocks[name] = farthest.merged([*self.shocks.get(name, ()), *each.far])
+
+    def tell(self, sums: Gather) -> None:
+        """Let sums that begin know what they may leave out; what is just as far may be of an earlier step."""
+        full = {name: far[-1][0] for name, far in self.values.items() if len(far) == extremes.KEPT}
+        sums.structure.least = full
+        for name, far in self.shocks.items():
+            if len(far) == farthest.KEPT:
+                sums.shocks[name].least = float(np.nextafter(far[-1][0], 0.0))
+
+
 class Pass:
     """One pass: `absorb` blocks, then ask for the `tree` of sums; paths that never reach the last step are left out."""
 
@@ -178,6 +201,7 @@ class Pass:
         self.compile = compile and kernel.available()
         self.lanes: dict[int, Lane] = {}
         self.tree: Tree[Gather] = Tree()
+        self.outmost = Outmost()
 
     def absorb(self, first_path: int, first_step: int, values: Mapping[str, NDArray]) -> None:
         """Add a block. Raises ValueError when it does not follow the last one of its paths."""
@@ -186,12 +210,15 @@ class Pass:
                 lane = self._lane(first, end - first, first_step)
                 lane.absorb({n: values[n][first - first_path : end - first_path] for n in self.plan.names}, self.tick)
                 if lane.step >= self.plan.steps:
-                    self.tree.add(first, end, self.lanes.pop(first).finish())
+                    sums = self.lanes.pop(first).finish()
+                    self.outmost.take(sums)
+                    self.tree.add(first, end, sums)
 
     def _lane(self, first_path: int, paths: int, first_step: int) -> Lane:
         lane = self.lanes.get(first_path)
         if lane is None and first_step == 0:
             lane = self.lanes[first_path] = Lane(self.plan, first_path, paths)
+            self.outmost.tell(lane.sums)
         held = len(next(iter(lane.rest.values()))) if lane and lane.rest else 0
         if lane is None or lane.step + held != first_step or lane.paths != paths:
             raise ValueError(

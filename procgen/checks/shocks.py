@@ -85,6 +85,7 @@ class ShockSums:
     paths: NDArray = field(default_factory=lambda: np.zeros(5))  # number, sums of level², spread², level, spread
     outside: int = 0  # shocks where the law has none
     far: list[farthest.Far] = field(default_factory=list)  # the shocks farthest out
+    least: float = farthest.LEAST  # no score up to this size is one of the farthest of all
     ends: apart.Ends = field(default_factory=dict)  # the paths farthest from the others
 
     def __post_init__(self) -> None:
@@ -125,7 +126,8 @@ class ShockSums:
         if at_once:
             self._compiled(z, g, first_step, lane, z if x is None else x)
             return
-        self.far = farthest.farthest(g, z, z if x is None else x, lane.first_path, first_step + offset, self.far)
+        values, first = z if x is None else x, first_step + offset
+        self.far = farthest.farthest(g, z, values, lane.first_path, first, self.far, None, self.least)
         u = uniforms(g)
         self.counts += bin_counts(u if whole else u[known])
         clusters = cluster_scores(u)
@@ -155,7 +157,7 @@ class ShockSums:
         self.asymmetry[0] += paths * min(steps, len(lane.view) - 1)
         self._add_profile(np.full(steps, float(paths)), sums, first_step)
         self.rows.update({GROUP: steps * -(-paths // GROUP)})
-        self.far = farthest.farthest(g, z, x, lane.first_path, first_step, self.far, worst.view(float))
+        self.far = farthest.farthest(g, z, x, lane.first_path, first_step, self.far, worst.view(float), self.least)
         self.stretches.absorb(g, first_step, lane.stretches, short)
 
     def _single(self, z: NDArray, g: NDArray, lane: ShockLane, offset: int) -> None:

@@ -59,6 +59,8 @@ class Structure:
     stayed: dict[str, int] = field(default_factory=dict)  # series -> values that equal the one before
     marks: dict[str, copies.Marks] = field(default_factory=dict)  # series -> stretches that would show in a copy
     prints: list[tuple[int, NDArray[np.uint64]]] = field(default_factory=list)  # (first path, (paths, series))
+    least: dict[str, float] = field(default_factory=dict)  # series -> below it no value is one of the farthest of all
+    _samples: dict[str, list[NDArray]] = field(default_factory=dict, repr=False)  # not looked at so far
 
     def absorb(self, column: int, x: NDArray, first_path: int, first_step: int, prints: NDArray[np.uint64]) -> bool:
         """Look at a tile (steps, paths) of one series; `prints` (paths,) is updated. True when all is finite."""
@@ -81,27 +83,34 @@ class Structure:
         elif what.type != "int64" and what.random and not what.discrete:
             stride = max(1, min(_SAMPLE, self.steps // 32))
             sample = x[-first_step % stride :: stride]
-            sample = sample[~np.isnan(sample)] if what.gaps else sample
-            with np.errstate(over="ignore", invalid="ignore"):
-                fits = int(np.count_nonzero(sample.astype(np.float32) == sample))
-                small = np.abs(sample) < _WHOLE
-                whole = int(np.count_nonzero((np.rint(sample) == sample) & small))
-                half = int(np.count_nonzero(sample.astype(np.float16) == sample)) if fits else 0
-                grids = [int(np.count_nonzero((np.rint(sample * s) / s == sample) & small)) for s in _GRIDS.values()]
-            seen = self.narrow.setdefault(what.name, [0] * len(_UNSEEN))
-            for k, count in enumerate((fits, whole, sample.size, half, *grids)):
-                seen[k] += count
-            if sample.size:
-                ends_here = [float(np.fmin.reduce(sample, None)), float(np.fmax.reduce(sample, None))]
-                self.ends[what.name] = _wider(self.ends.get(what.name), ends_here)
+            self._samples.setdefault(what.name, []).append(sample[~np.isnan(sample)] if what.gaps else sample.flatten())
+            if sum(part.size for part in self._samples[what.name]) >= _AT_ONCE:
+                self._look_closer(what.name)
         if what.reach is not None:
-            self.far[what.name] = what.reach.farthest(x, first_path, first_step, self.far.get(what.name, ()), ends)
+            known, least = self.far.get(what.name, ()), self.least.get(what.name, 0.0)
+            self.far[what.name] = what.reach.farthest(x, first_path, first_step, known, ends, least)
             more = what.reach.beyond(x, first_step, ends)
             self.beyond[what.name] = [a + b for a, b in zip(self.beyond.get(what.name, (0, 0)), more, strict=True)]
         outside = what.possible.outside(x)
         if outside is not None:
             support.note(self.outside, what.name, outside, x, first_path, first_step)
         return finite
+
+    def _look_closer(self, name: str) -> None:
+        """Count what the sampled values of a series that wait for it might be rounded to."""
+        sample = np.concatenate(self._samples.pop(name))
+        with np.errstate(over="ignore", invalid="ignore"):
+            fits = int(np.count_nonzero(sample.astype(np.float32) == sample))
+            small = np.abs(sample) < _WHOLE
+            whole = int(np.count_nonzero((np.rint(sample) == sample) & small))
+            half = int(np.count_nonzero(sample.astype(np.float16) == sample)) if fits else 0
+            grids = [int(np.count_nonzero((np.rint(sample * s) / s == sample) & small)) for s in _GRIDS.values()]
+        seen = self.narrow.setdefault(name, [0] * len(_UNSEEN))
+        for k, count in enumerate((fits, whole, sample.size, half, *grids)):
+            seen[k] += count
+        if sample.size:
+            ends = [float(np.fmin.reduce(sample)), float(np.fmax.reduce(sample))]
+            self.ends[name] = _wider(self.ends.get(name), ends)
 
     def hold(self, column: int, x: NDArray, before: NDArray | None, first_path: int, first_step: int) -> None:
         """Look whether a tile (steps, paths) is held as stated; `before` is the row (1, paths) before it."""
@@ -122,6 +131,8 @@ class Structure:
             self.stayed[name] = watch.stayed
 
     def close(self, first_path: int, prints: NDArray[np.uint64]) -> None:
+        for name in [*self._samples]:
+            self._look_closer(name)
         self.prints.append((first_path, prints))
 
     def printed(self) -> dict[str, NDArray]:

@@ -3,6 +3,8 @@
 import numpy as np
 import pytest
 
+from procgen.checks import farthest
+from procgen.checks.gather import Gather
 from procgen.checks.lane import Pass
 from procgen.checks.validate import gathered, judged, plan_of
 from procgen.checks.verdict import Verdict
@@ -121,3 +123,20 @@ def test_pairs_that_are_left_out_are_said():
     found = list(judged(gathered(plan_of(spec), [(0, 0, draw(spec))])))
     notes = [check.note for check in found if check.what == "pairs of series"]
     assert notes == ["36 of the 45 pairs of series are compared, the first ones of the spec"]
+
+
+def test_what_is_known_to_lie_farther_elsewhere_changes_no_sum():
+    """Paths that follow others are told how far out to look; the farthest of all are those of ranges summed alone."""
+    spec = spec_of([{"white_noise": {"sd": 1}}], 80, 192, 9)
+    plan, x = plan_of(spec), draw(spec)["x"]
+    x[5, 70] = x[40, 60] = x[100, 7] = 4.5  # as far out, some in later paths at earlier steps
+    x[120, 3], x[0, 0] = 9.0, -9.0
+    together, alone = Pass(plan), Gather(plan)
+    for first in range(0, 192, 16):
+        one = Pass(plan)
+        for each in (together, one):
+            each.absorb(first, 0, {"x": x[first : first + 16]})
+        alone.merge(one.total())
+    assert len(together.outmost.shocks["x"]) == farthest.KEPT
+    assert together.total().structure.far == alone.structure.far
+    assert together.total().shocks["x"].far == alone.shocks["x"].far
