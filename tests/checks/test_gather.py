@@ -127,9 +127,9 @@ def test_pairs_that_are_left_out_are_said():
 
 def test_what_is_known_to_lie_farther_elsewhere_changes_no_sum():
     """Paths that follow others are told how far out to look; the farthest of all are those of ranges summed alone."""
-    spec = spec_of([{"white_noise": {"sd": 1}}], 80, 192, 9)
+    spec = spec_of([{"white_noise": {"sd": 1}}], 192, 80, 9)
     plan, x = plan_of(spec), draw(spec)["x"]
-    x[5, 70] = x[40, 60] = x[100, 7] = 4.5  # as far out, some in later paths at earlier steps
+    x[4 * np.arange(48), 60 - np.arange(48)] = 4.5  # as far out, later paths at earlier steps: more than are kept
     x[120, 3], x[0, 0] = 9.0, -9.0
     together, alone = Pass(plan), Gather(plan)
     for first in range(0, 192, 16):
