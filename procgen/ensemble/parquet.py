@@ -22,6 +22,7 @@ from procgen.ensemble.layouts import Layout
 from procgen.ensemble.places import Place, readable
 from procgen.ensemble.plan import GROUP_ROWS, Block, cut
 from procgen.ensemble.reading import fits
+from procgen.ensemble.watched import Watched
 from procgen.spec.pages import Bomb, refuse_bombs
 
 if TYPE_CHECKING:
@@ -218,13 +219,14 @@ def _opened(path: Place, rows: Form) -> Iterator[pq.ParquetFile]:
     import pyarrow as pa
 
     try:
-        with _file(path, rows) as file:
+        source = path if isinstance(path, Path) else Watched(path.open(), path)
+        with _file(path, source, rows) as file:
             _expect_schema(path, file.schema_arrow, rows.schema)
             if file.metadata.num_rows != rows.total():
                 raise EnsembleError(
                     f"{path} is damaged: expected {rows.total()} rows ({rows.whole}), got {file.metadata.num_rows}"
                 )
-            _refuse_bombs(path, file, rows)
+            _refuse_bombs(path, source, file, rows)
             yield file
     except Bomb as error:
         raise EnsembleError(f"{error}, or draw it again with --resume (resume=True)") from None
@@ -239,25 +241,27 @@ def _opened(path: Place, rows: Form) -> Iterator[pq.ParquetFile]:
         ) from None
 
 
-def _file(path: Place, rows: Form) -> pq.ParquetFile:
+def _file(path: Place, source: Path | Watched, rows: Form) -> pq.ParquetFile:
     import pyarrow.parquet as pq
 
     try:
-        return pq.ParquetFile(readable(path), read_dictionary=rows.texts)
+        return pq.ParquetFile(source, read_dictionary=rows.texts)
     except KeyError:
         raise EnsembleError(f"{path} is damaged: it has no column {rows.texts[0]}") from None
 
 
-def _refuse_bombs(path: Place, file: pq.ParquetFile, rows: Form) -> None:
-    """EnsembleError for a file whose pages hold more than belongs there; behind a URL it would ask too often."""
-    if isinstance(path, Path):
-        wanted = sum(rows.whole.rows if _is_list(field) else rows.total() for field in rows.schema)
-        found = refuse_bombs(path, file.metadata, rows.schema.names)
-        if found != wanted:
-            raise EnsembleError(
-                f"{path} is damaged: expected {wanted:,} values, got {found:,}; draw it again with "
-                "--resume (resume=True)"
-            )
+def _refuse_bombs(path: Place, source: Path | Watched, file: pq.ParquetFile, rows: Form) -> None:
+    """EnsembleError for a file whose pages hold more than belongs there; behind a URL they are seen when read."""
+    wanted = sum(rows.whole.rows if _is_list(field) else rows.total() for field in rows.schema)
+    names = rows.schema.names
+    if isinstance(source, Watched):
+        found = source.expect(file.metadata, names)
+    else:
+        found = refuse_bombs(source, file.metadata, names)
+    if found != wanted:
+        raise EnsembleError(
+            f"{path} is damaged: expected {wanted:,} values, got {found:,}; draw it again with --resume (resume=True)"
+        )
 
 
 def _expect_schema(path: Place, found: pa.Schema, expected: pa.Schema) -> None:

@@ -8,6 +8,7 @@ compact protocol.
 from __future__ import annotations
 
 from collections.abc import Collection, Iterator, Sequence
+from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, BinaryIO
 
@@ -77,23 +78,53 @@ def refuse_bombs(path: Path, found: pq.FileMetaData, names: Collection[str]) -> 
 
     Bomb where a page grows beyond MOST_BYTES, or holds more values than the footer says.
     """
-    most, pages, values = MOST_PAGES + path.stat().st_size // 1000, 0, 0
-    of = [field.name for field in found.schema.to_arrow_schema() for _ in range(_leaves(field.type))]
+    pages = Pages(path, path.stat().st_size, found)
     with path.open("rb", buffering=0) as file:
-        for k in range(found.num_row_groups):
-            group = found.row_group(k)
-            for j in range(group.num_columns):
-                column = group.column(j)
-                if of[j] in names:
-                    begin = column.data_page_offset
-                    if column.has_dictionary_page and column.dictionary_page_offset:
-                        begin = min(begin, column.dictionary_page_offset)
-                    here = 0
-                    for size, count in _pages(file, begin, column.total_compressed_size):
-                        pages, here = pages + 1, here + count
-                        _refuse(path, column, found.schema.column(j).length, size, here, pages > most)
-                    values += here
-    return values
+        return sum(pages.values(file, chunk) for chunk in pages.chunks if chunk.name in names)
+
+
+@dataclass(frozen=True)
+class Chunk:
+    """The bytes of a file that hold one column in one row group, as its footer says; widest: bytes of a fixed value."""
+
+    name: str
+    begin: int
+    size: int
+    column: Any
+    widest: int
+
+    @property
+    def end(self) -> int:
+        return self.begin + self.size
+
+
+class Pages:
+    """Looks at the pages of a Parquet file: path, bytes of it, and its footer."""
+
+    def __init__(self, path: Any, size: int, found: pq.FileMetaData):
+        self._path, self._most, self._seen = path, MOST_PAGES + size // 1000, 0
+        of = [field.name for field in found.schema.to_arrow_schema() for _ in range(_leaves(field.type))]
+        groups = (found.row_group(k) for k in range(found.num_row_groups))
+        self.chunks = [
+            Chunk(of[j], _begin(column), column.total_compressed_size, column, found.schema.column(j).length)
+            for group in groups
+            for j, column in enumerate(map(group.column, range(group.num_columns)))
+        ]
+
+    def values(self, file: BinaryIO, chunk: Chunk, offset: int = 0) -> int:
+        """The values of a chunk by the headers of its pages, in what holds the file from `offset` on; Bomb."""
+        here = 0
+        for size, count in _pages(self._path, file, chunk.begin - offset, chunk.size):
+            self._seen, here = self._seen + 1, here + count
+            _refuse(self._path, chunk, size, here, self._seen > self._most)
+        return here
+
+
+def _begin(column: Any) -> int:
+    begin = column.data_page_offset
+    if column.has_dictionary_page and column.dictionary_page_offset:
+        begin = min(begin, column.dictionary_page_offset)
+    return int(begin)
 
 
 def _leaves(kind: pa.DataType) -> int:
@@ -101,25 +132,25 @@ def _leaves(kind: pa.DataType) -> int:
     return sum(_leaves(kind.field(k).type) for k in range(kind.num_fields)) if kind.num_fields else 1
 
 
-def _refuse(path: Path, column: Any, widest: int, size: int, values: int, many: bool) -> None:
-    what = ""
+def _refuse(path: Any, chunk: Chunk, size: int, values: int, many: bool) -> None:
+    column, what = chunk.column, ""
     if not 0 <= size <= MOST_BYTES:
         what = f"a page of column {column.path_in_schema} would become {size:,} bytes, more than {MOST_BYTES:,}"
     elif values > column.num_values:
         what = f"column {column.path_in_schema} has more values than the {column.num_values:,} that its footer says"
     elif many:
         what = "it is cut into more pages than its size can fill"
-    elif column.physical_type == "FIXED_LEN_BYTE_ARRAY" and widest > _WIDEST:
-        what = f"column {column.path_in_schema} has values of {widest:,} bytes each"
+    elif column.physical_type == "FIXED_LEN_BYTE_ARRAY" and chunk.widest > _WIDEST:
+        what = f"column {column.path_in_schema} has values of {chunk.widest:,} bytes each"
     if what:
         raise Bomb(f"{path} is refused: {what}; write it again with pages of usual size")
 
 
-def _pages(file: BinaryIO, begin: int, length: int) -> Iterator[tuple[int, int]]:
+def _pages(path: Any, file: BinaryIO, begin: int, length: int) -> Iterator[tuple[int, int]]:
     """(bytes when unpacked, values) of each page of a column chunk; of dictionaries no values."""
     end = begin + length
     while 0 <= begin < end:
-        header, size = _header(file, begin)
+        header, size = _header(path, file, begin)
         packed, kind = header.get(3, -1), header.get(1, -1)
         yield header.get(2, -1), 0 if kind == 2 else header.get(501, header.get(801, 0))
         if packed < 0:
@@ -127,7 +158,7 @@ def _pages(file: BinaryIO, begin: int, length: int) -> Iterator[tuple[int, int]]
         begin += size + packed
 
 
-def _header(file: BinaryIO, begin: int) -> tuple[dict[int, int], int]:
+def _header(path: Any, file: BinaryIO, begin: int) -> tuple[dict[int, int], int]:
     """The header that begins at a place of a file, and its length."""
     for most in _HEADERS:
         file.seek(begin)
@@ -136,10 +167,10 @@ def _header(file: BinaryIO, begin: int) -> tuple[dict[int, int], int]:
             return found, _struct(data, 0, 0, 0, found)
         except IndexError:  # it goes on
             if len(data) < most:
-                raise Bomb(f"{file.name} is damaged: it ends inside of a page") from None
+                raise Bomb(f"{path} is damaged: it ends inside of a page") from None
         except ValueError:
             break
-    raise Bomb(f"{file.name} is damaged: a header of a page cannot be read")
+    raise Bomb(f"{path} is damaged: a header of a page cannot be read")
 
 
 def _struct(data: bytes, at: int, place: int, depth: int, found: dict[int, int]) -> int:

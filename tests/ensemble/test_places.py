@@ -8,11 +8,16 @@ import time
 import urllib.error
 import urllib.request
 
+import numpy as np
+import pyarrow as pa
+import pyarrow.parquet as pq
 import pytest
 
 import procgen as pg
 from procgen.ensemble import EnsembleError, places, plan
 from procgen.ensemble.places import Remote, place_of
+from procgen.ensemble.watched import Watched
+from procgen.spec import pages
 from tests.ensemble.fakes import ROOT, fake_check, fake_render, fake_spec, start
 
 pytest.importorskip("moto.server")
@@ -177,3 +182,37 @@ def test_commands_read_an_ensemble_from_a_store_and_say_where_there_is_none(buck
         assert code == 2 and f"there is no ensemble at {plain}; give the URL of one" in text
     code, text = said("export", url, "-o", bucket("runs/x.csv"))
     assert code == 2 and "on this machine, where exports are written" in text
+
+
+@pytest.mark.parametrize("kind", ["s3", "memory"])
+def test_pages_behind_a_url_are_refused_before_they_reach_the_reader_of_parquet(bucket, monkeypatch, kind):
+    """The bound is brought below the pages of a good part; real bombs are in tests/test_hostile_tables.py."""
+    url = bucket("runs/pages") if kind == "s3" else "memory://here/pages"
+    fake_render(fake_spec(**SPEC), url, workers=1)
+    monkeypatch.setattr(pages, "MOST_BYTES", 1 << 10)
+    said = fake_check(url).text()
+    assert "is refused: a page of column path would become 160," in said
+    assert "more than 1,024; write it again with pages of usual size, or draw it again with --resume" in said
+
+
+@pytest.mark.parametrize("size", [7, 3_000, -1])
+def test_watched_pages_are_seen_in_pieces_of_any_size(tmp_path, monkeypatch, size):
+    table = pa.table({"x": np.arange(5000.0), "y": [f"a{k % 9}" for k in range(5000)]})
+    pq.write_table(table, tmp_path / "a.parquet", data_page_size=1000, row_group_size=2000)
+    found = pq.read_metadata(tmp_path / "a.parquet")
+    whole = (tmp_path / "a.parquet").read_bytes()
+
+    def read():
+        file = Watched(place_of("memory://here/a").open(), "a")
+        assert [file.expect(found, names) for names in (["x"], ["x", "y"])] == [5000, 10_000]
+        got = bytearray()
+        while data := file.read(size):
+            got += data
+        return bytes(got)
+
+    with place_of("memory://here").store.open_output_stream("/here/a") as out:
+        out.write(whole)
+    assert read() == whole
+    monkeypatch.setattr(pages, "MOST_BYTES", 10)
+    with pytest.raises(pages.Bomb, match=r"^a is refused: a page of column [xy] would become"):
+        read()
