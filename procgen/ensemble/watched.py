@@ -16,7 +16,7 @@ from procgen.spec.pages import Pages
 
 
 class Watched:
-    """An open file for a reader; once it knows what to `expect`, Bomb where a page that is read would grow too large."""
+    """An open file for a reader; once it knows what to `expect`, Bomb where a page that is read would grow too much."""
 
     def __init__(self, file: Any, name: object):
         self._file, self._name = file, name
