@@ -28,3 +28,11 @@ def test_where_nanoseconds_go_is_told_for_every_stage_and_case():
     for column in range(1, len(head)):
         parts = [float(row[column]) for row in rows[:-1]]
         assert min(parts) >= 0 and abs(sum(parts) - float(rows[-1][column])) < 0.6
+
+
+def test_the_bench_of_large_ensembles_renders_and_validates_both_shapes_within_the_memory_of_a_worker():
+    _, _, *rows = rows_of("bench_large")
+    assert [(row[0], row[3]) for row in rows] == [
+        (name, command) for name in ("wide", "long") for command in ("render", "validate")
+    ]
+    assert all(0 < float(row[-1]) < 700 for row in rows)
