@@ -189,16 +189,16 @@ def marked(before, x, ends, mix, hashes, values, paths, steps, mixed, where, fou
     for t in range(-2, x.shape[0]):
         bits = (x[t] if t >= 0 else before[reach + t]).view(np.uint64)
         one, two, three = mixed[t % 3], mixed[(t - 1) % 3], mixed[(t - 2) % 3]
+        for p in range(lanes):
+            one[p] = bits[p] * mix[0]
         found = 0
         for begin in range(0, lanes, SOME):
-            end, any_here = min(begin + SOME, lanes), False
+            end = min(begin + SOME, lanes)
+            if t < 0 or _least(one[begin:end], two[begin:end], three[begin:end]) > ends:
+                continue
             for p in range(begin, end):
-                one[p] = bits[p] * mix[0]
-                any_here |= one[p] ^ (two[p] >> np.uint64(1)) ^ (three[p] >> np.uint64(2)) <= ends
-            if any_here and t >= 0:  # of so few, as a rule there is none
-                for p in range(begin, end):
-                    where[found] = p
-                    found += one[p] ^ (two[p] >> np.uint64(1)) ^ (three[p] >> np.uint64(2)) <= ends
+                where[found] = p
+                found += one[p] ^ (two[p] >> np.uint64(1)) ^ (three[p] >> np.uint64(2)) <= ends
         for k in range(found):
             p = where[k]
             first = x[t - reach, p] if t >= reach else before[t, p]
@@ -213,3 +213,12 @@ def marked(before, x, ends, mix, hashes, values, paths, steps, mixed, where, fou
                 hashes[count], values[count], paths[count], steps[count] = total, x[t, p], p, t
                 count += 1
     found_in_all[0] = count
+
+
+@_part
+def _least(one, two, three):
+    """The least of the hashes of ends."""
+    least = np.uint64(2**64 - 1)
+    for p in range(one.shape[0]):
+        least = min(least, one[p] ^ (two[p] >> np.uint64(1)) ^ (three[p] >> np.uint64(2)))
+    return least
