@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import threading
 from collections.abc import Sequence
+from functools import cache
 from typing import Any
 
 import numpy as np
@@ -20,6 +21,16 @@ BLOCK = 64  # steps
 GROUP = 16  # paths: a lane group of the ensemble, the finest cut between two parts
 WIDE = 32  # paths from which on compiled passes are worth their calls (measured: at 16 neither form is quicker)
 _local = threading.local()
+
+
+@cache
+def keep_memory() -> None:
+    """Let memory that a tile gives back be had again by the next one, which costs the system less than new memory.
+
+    glibc keeps as much as twice the largest array that was freed (mallopt(3), M_MMAP_THRESHOLD: up to 32 MB); others
+    do as they do.
+    """
+    np.empty(31 << 17)  # 31 MB, of which nothing is touched
 
 
 def scratch(steps: int, paths: int, number: int = 0) -> NDArray:
@@ -48,6 +59,15 @@ def across(x: NDArray) -> NDArray:
             x = np.concatenate([x, np.zeros((*x.shape[:-1], 1), x.dtype)], axis=-1)
         x = x[..., 0::2] + x[..., 1::2]
     return x[..., 0]
+
+
+def down(x: NDArray) -> NDArray:
+    """Sum over the first axis, neighbours first: `across` for what lies row by row."""
+    while len(x) > 1:
+        if len(x) % 2:
+            x = np.concatenate([x, np.zeros_like(x[:1])])
+        x = x[0::2] + x[1::2]
+    return x[0]
 
 
 def add_products(total: NDArray, a: NDArray, b: NDArray | None = None, offset: int = 0) -> int:

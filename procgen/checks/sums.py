@@ -11,7 +11,7 @@ from collections.abc import Sequence
 import numpy as np
 from numpy.typing import NDArray
 
-from procgen.checks.blocks import GROUP, across
+from procgen.checks.blocks import GROUP, across, down
 
 _TOGETHER = 64  # pairs of places whose products are made at once
 KEPT = 20_000  # paths whose values at probes are kept for tests of a known law
@@ -99,10 +99,11 @@ class Powers:
         part.n += known.sum(axis=0)
         part.paths = len(rows)
         values = np.where(known, rows, 0.0)
-        power = values
-        for k in range(4):
-            part.sums[k] = across(power.T)
-            power = power * values
+        powers = np.empty((len(rows), 4, len(self.n)))
+        powers[:, 0] = values
+        for k in range(3):
+            np.multiply(powers[:, k], values, out=powers[:, k + 1])
+        part.sums = down(powers)
         part.pairs, part.ends = _neighbours(np.where(known, rows, np.nan))
         self.merge(part)
 
@@ -126,16 +127,17 @@ def _beside(left: NDArray, right: NDArray) -> NDArray:
 
 
 def _neighbours(rows: NDArray) -> tuple[NDArray, NDArray]:
-    """Pairs within (paths, size), joined by halves, and the outer rows."""
-    ends = np.array([rows, rows])
-    pairs = np.zeros(ends.shape)
-    while ends.shape[1] > 1:
-        if ends.shape[1] % 2:
-            ends = np.concatenate([ends, np.full((2, 1, ends.shape[2]), np.nan)], axis=1)
-            pairs = np.concatenate([pairs, np.zeros((2, 1, ends.shape[2]))], axis=1)
-        pairs = pairs[:, 0::2] + pairs[:, 1::2] + _beside(ends[1, 0::2], ends[0, 1::2])
-        ends = np.array([ends[0, 0::2], ends[1, 1::2]])
-    return pairs[:, 0], ends[:, 0]
+    """Pairs within (paths, size), joined by halves, and the outer rows of all that is joined."""
+    beside = _beside(rows[:-1], rows[1:])
+    pairs, width = np.zeros((2, *rows.shape)), 1
+    while pairs.shape[1] > 1:
+        if pairs.shape[1] % 2:
+            pairs = np.concatenate([pairs, np.zeros((2, 1, rows.shape[1]))], axis=1)
+        pairs = pairs[:, 0::2] + pairs[:, 1::2]
+        between = beside[:, width - 1 :: 2 * width]  # the last row of the left half of each, and the next one
+        pairs[:, : between.shape[1]] += between
+        width *= 2
+    return pairs[:, 0], np.array([rows[0], rows[-1] if width == len(rows) else np.full(rows.shape[1], np.nan)])
 
 
 class Kept:
