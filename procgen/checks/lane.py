@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 
 from procgen.chance import kernel
 from procgen.checks import extremes, farthest, missing
-from procgen.checks.blocks import BLOCK
+from procgen.checks.blocks import BLOCK, keep_memory
 from procgen.checks.gather import Gather, Plan
 from procgen.checks.pools import PoolLane
 from procgen.checks.probes import SeriesPlan
@@ -197,6 +197,7 @@ class Pass:
     """One pass: `absorb` blocks, then ask for the `tree` of sums; paths that never reach the last step are left out."""
 
     def __init__(self, plan: Plan, tick: Tick = lambda rows: None, compile: bool = False):
+        keep_memory()
         self.plan, self.tick = plan, tick
         self.compile = compile and kernel.available()
         self.lanes: dict[int, Lane] = {}
