@@ -186,7 +186,7 @@ def test_commands_read_an_ensemble_from_a_store_and_say_where_there_is_none(buck
 
 @pytest.mark.parametrize("kind", ["s3", "memory"])
 def test_pages_behind_a_url_are_refused_before_they_reach_the_reader_of_parquet(bucket, monkeypatch, kind):
-    """The bound is brought below the pages of a good part; real bombs are in tests/test_hostile_tables.py."""
+    """The bound is brought below the pages of a good part; real bombs are in tests/hostile."""
     url = bucket("runs/pages") if kind == "s3" else "memory://here/pages"
     fake_render(fake_spec(**SPEC), url, workers=1)
     monkeypatch.setattr(pages, "MOST_BYTES", 1 << 10)
