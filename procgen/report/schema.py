@@ -6,7 +6,7 @@ reader refuses too. What joins parameters, names and steps (roots, correlations,
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 from typing import Any
 
 from procgen.chance.laws import LAWS, Law
@@ -16,9 +16,10 @@ from procgen.spec.declare import Body, Real, Schema, mapping, mapping_of, one_or
 from procgen.spec.entries import REPLACED, SPREAD
 from procgen.spec.groups import TEMPLATE
 from procgen.spec.parameters import DRAWN
-from procgen.spec.reader import HEAD, SERIES
+from procgen.spec.reader import HEAD, RESERVED, SERIES
 from procgen.spec.tables import LOOKUP, TABLE
 from procgen.spec.timegrid import TIME
+from procgen.spec.variants import ALL, BASE
 from procgen.terms import catalogue
 
 BODY: Schema = {"$ref": "#/$defs/body"}
@@ -32,12 +33,12 @@ def schema() -> Schema:
     sections = {
         "time": time(),
         "reuse": {"description": "a home for YAML anchors, otherwise ignored"},
-        "shared": named({"anyOf": [BODY, mapping({"of": BODY}, ["of"])]}),
-        "series": named({"anyOf": [BODY, mapping_of(SERIES)]}),
+        "shared": named({"anyOf": [BODY, mapping({"of": BODY}, ["of"])]}, RESERVED),
+        "series": named({"anyOf": [BODY, mapping_of(SERIES)]}, RESERVED),
         "groups": named(mapping_of((*TEMPLATE, *(p for p in SERIES if p.name not in ("of", "stream", "before"))))),
         "parameters": named({"anyOf": declared()}),
         "correlation": one_or_list({"anyOf": [mapping_of(form) for form in FORMS.values()]}, 0),
-        "variants": named({"type": "object", "minProperties": 1, "description": SETTINGS}),
+        "variants": named({"type": "object", "minProperties": 1, "description": SETTINGS}, (BASE, ALL)),
     }
     return {
         "$schema": "https://json-schema.org/draft/2020-12/schema",
@@ -57,17 +58,21 @@ def schema() -> Schema:
 def time() -> Schema:
     """The time of a spec: its steps, or the list of their times."""
     form = mapping_of(TIME)
-    return {**form, "required": [], "anyOf": [{"required": [name]} for name in (*form["required"], "at")]}
+    least = [{"required": [name]} for name in (*form["required"], "at")]
+    beside = {"start": ["every"], "stamp": ["start"], "holidays": ["every"]}
+    return {**form, "required": [], "anyOf": least, "dependentRequired": beside}
 
 
 def declared() -> list[Schema]:
     """The ways to write a number that varies: a draw, or a table."""
-    return [mapping_of(DRAWN), mapping({TABLE: mapping_of(LOOKUP)}, [TABLE])]
+    looked_up = {**mapping_of(LOOKUP), "oneOf": [{"required": ["file"]}, {"required": ["values"]}]}
+    return [mapping_of(DRAWN), mapping({TABLE: looked_up}, [TABLE])]
 
 
-def named(body: Schema) -> Schema:
-    """Bodies by name."""
-    return {"type": "object", "additionalProperties": body, "propertyNames": NAME, "minProperties": 1}
+def named(body: Schema, taken: Sequence[str] = ()) -> Schema:
+    """Bodies by name, none of which is one of those that are taken."""
+    names = {**NAME, "not": {"enum": list(taken)}} if taken else NAME
+    return {"type": "object", "additionalProperties": body, "propertyNames": names, "minProperties": 1}
 
 
 def entry() -> Schema:
@@ -98,6 +103,8 @@ def parameters_schema(term: Any) -> Schema:
     if term.takes_shock or len(spread) == 2:
         form["required"] = [name for name in form["required"] if name not in REPLACED]
         form["oneOf"] = [{"required": [name]} for name in (*spread, *(["shock"] if term.takes_shock else []))]
+    elif instead := [p.name for p in term.parameters if p.name in ("sd", "spread")][1:]:
+        form["anyOf"] = [{"required": [name]} for name in ("sd", *instead)]
     return form
 
 

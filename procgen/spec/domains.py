@@ -10,6 +10,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any, Protocol
 
+from procgen.spec.units import length_pattern
 from procgen.spec.words import bounds, did_you_mean, one_of, unquote
 
 if TYPE_CHECKING:
@@ -250,7 +251,7 @@ class Span(Domain):
         return _on_grid(tree, reader, "span_steps")
 
     def schema(self) -> Schema:
-        return {"anyOf": [{"type": "number", "exclusiveMinimum": 0}, {"type": "string"}]}
+        return {"anyOf": [{"type": "number", "exclusiveMinimum": 0}, {"type": "string", "pattern": length_pattern()}]}
 
 
 @dataclass(frozen=True)

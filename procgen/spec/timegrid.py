@@ -13,7 +13,7 @@ from procgen.spec.calendar import LAST_YEAR, Grid
 from procgen.spec.declare import INVALID, Choice, Domain, Parameter, Reading, Schema, Whole, one_or_list, read_each
 from procgen.spec.timelist import TimeList, listed
 from procgen.spec.tree import Tree
-from procgen.spec.units import parse_date, parse_length
+from procgen.spec.units import DATED, length_pattern, parse_date, parse_length
 from procgen.spec.words import did_you_mean
 
 MOST = 10**12  # paths, or steps; an address holds more, but nobody's disk does
@@ -39,7 +39,7 @@ class Every(Domain):
         return int(count), unit
 
     def schema(self) -> Schema:
-        return {"type": "string"}
+        return {"type": "string", "pattern": length_pattern(whole=True)}
 
 
 class Date(Domain):
@@ -53,7 +53,7 @@ class Date(Domain):
         return reader.expected(tree, self.describe()) if moment is None else moment
 
     def schema(self) -> Schema:
-        return {"type": "string"}
+        return {"type": "string", "pattern": DATED}
 
 
 class Zone(Domain):
@@ -87,7 +87,7 @@ class Dates(Domain):
         return INVALID if INVALID in days else tuple(sorted(set(days)))
 
     def schema(self) -> Schema:
-        return one_or_list({"type": "string", "maxLength": 10}, 0)
+        return one_or_list({"type": "string", "maxLength": 10, "pattern": DATED}, 0)
 
     def _day(self, tree: Tree, reader: Reading) -> date | Any:
         moment = parse_date(tree.value) if isinstance(tree.value, str) and len(tree.value) <= 10 else None

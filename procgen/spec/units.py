@@ -54,6 +54,14 @@ _DATE = re.compile(
     re.ASCII,
 )
 
+DATED = r"^\s*[0-9]{4}-[0-9]{2}-[0-9]{2}"  # how a date begins, for editors
+
+
+def length_pattern(whole: bool = False) -> str:
+    """A regular expression, for editors, that every length of time fits; whole: whole numbers of a unit, no steps."""
+    units = "|".join(name for name, unit in _UNIT.items() if not (whole and unit == "step"))
+    return rf"^\s*([0-9]{{1,15}}(\.{'0' if whole else '[0-9]'}{{1,15}})?)? *({units})\s*$"
+
 
 def parse_length(text: str) -> tuple[Fraction, str]:
     """Return count and unit of a length such as 15min, 1.5 h, or day (a count of 1); ValueError says why not.

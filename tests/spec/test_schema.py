@@ -4,6 +4,7 @@ Judged by the package jsonschema, a public implementation of JSON Schema 2020-12
 """
 
 import json
+import re
 from pathlib import Path
 
 import pytest
@@ -20,7 +21,9 @@ from procgen.spec.model import SpecError
 from procgen.spec.reader import read_file, read_raw, read_text
 from procgen.spec.yaml12 import from_text
 from procgen.terms import catalogue
+from tests.spec.broken import broken
 from tests.spec.strategies import entries, specs, wild
+from tests.spec.test_groups import TABLE
 
 CATALOGUE = catalogue()
 SCHEMA = Draft202012Validator(schema())
@@ -113,6 +116,67 @@ def test_what_the_head_cannot_say_is_refused(change):
 )
 def test_what_the_reader_takes_is_accepted(raw):
     assert SCHEMA.is_valid(raw) or not taken(raw)
+
+
+# What no schema can say, by how the reader says it: names and what they stand for, sums and roots of several numbers,
+# numbers that are not finite (JSON has none), the grid of steps, the clock and the calendar, keys written twice.
+BEYOND = {
+    "what a name stands for": "there is no (series|term|hidden output|parameter|place|column)|expected a (hidden "
+    "output|term that draws shocks|noise as shock)|nothing uses|these uses go in a circle|"
+    "has 2 terms of kind|a shock goes by",
+    "a name that is taken": "needs a label of its own|the label .* is taken|the stream .* belongs|is a (series|shared "
+    "body) already|expected two different names|(is given|stands) twice|is set twice",
+    "the form of a stream's name": "expected a name of at most 100 letters",
+    "numbers that go together": r"expected all roots|alpha \+ beta|expected E log|positive definite|on the diagonal|"
+    r"symmetric matrix|rows of 2 for 2|expected 2 rows|squares that sum|at most 1e\+13 values|an int64 has no decimals",
+    "how a list of names is read": "expected a list of at least two names",
+    "a number that is not finite": "the number must be finite",
+    "a key that means nothing without another": "means nothing without|says its own spread|cannot vary|count only on",
+    "the steps of the grid": "needs the length of a step|expected steps that end by",
+    "the clock and the calendar": "expected a (time zone|date|year|start)|does not exist in|has an offset that|unknown "
+    "unit",
+    "what a variant puts in place": r"expected a (number|whole number).* got (-1|\"high\"|1e\+99)",
+    "a draw, its range and its weights": "where draws are|no end there|which reach|low end below|a weight for each",
+    "a table, and what stands in it": "there is no file|in column|the table has no row|has a row of a table|or a table "
+    "with a row|expected a list of numbers, for key",
+    "a key written twice": "is written twice",
+}
+
+
+@pytest.fixture(scope="module")
+def judged(tmp_path_factory):
+    """Every broken spec of the suite that is YAML: by name, whether the schema takes it, and what the reader says."""
+    file = tmp_path_factory.mktemp("broken") / "a.yaml"
+    (file.parent / "stores.csv").write_text(TABLE)
+    found = {}
+    for name, text in broken():
+        tree = from_text(text, str(file), [])
+        if tree is not None:
+            said = []
+            try:
+                read_text(text, CATALOGUE, LAWS, str(file))
+            except SpecError as error:
+                said = [fault.message for fault in error.faults]
+            found[name] = SCHEMA.is_valid(tree.plain()), said
+    return found
+
+
+def test_of_every_broken_spec_what_a_schema_can_say_is_refused(judged):
+    """What it lets pass is wrong in a way that no schema can say, and what the reader takes it takes as well."""
+    passed = {name: said for name, (valid, said) in judged.items() if valid}
+    untold = {name: said for name, said in passed.items() if not all(map(beyond, said))}
+    assert untold == {}
+    assert all(valid for valid, said in judged.values() if not said)
+    assert len(judged) > 200 and len(passed) < len(judged) / 2
+
+
+def test_each_reason_is_one_that_is_met(judged):
+    met = {reason for valid, said in judged.values() if valid for reason in map(beyond, said)}
+    assert met == set(BEYOND)
+
+
+def beyond(message):
+    return next((reason for reason, pattern in BEYOND.items() if re.search(pattern, message)), None)
 
 
 def domains(parameters):
