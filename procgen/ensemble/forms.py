@@ -57,6 +57,11 @@ class Form:
         """Columns of texts that repeat, which are read as numbers of them."""
         return [self.names["id"]] if "id" in self.names else []
 
+    @property
+    def by_step(self) -> list[str]:
+        """Columns that are the same on every path."""
+        return [name for role, name in self.names.items() if role in ("step", "time")]
+
     def pieces(self, row_bytes: int) -> Iterator[Block]:
         """Rectangles that are read by themselves; `row_bytes` of all columns of the ensemble."""
         yield from cut(self.whole, max(min(GROUP_ROWS, BUFFER_BYTES // row_bytes), 1))
@@ -145,7 +150,7 @@ class Form:
 
     def _expect_index(self, table: pa.Table, block: Block, where: object) -> None:
         for role, name in self.names.items():
-            if role != "id":
+            if role != "id" and name in table.column_names:  # what was not read is known to be right
                 paths = np.arange(block.first_path, block.end_path)[:, None]
                 wanted = paths if role == "path" else self._at(role, block)
                 found = numbers(table.column(name), f"column {name}", where, block)

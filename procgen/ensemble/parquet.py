@@ -15,6 +15,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from procgen.ensemble.again import Again
 from procgen.ensemble.columns import Column
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.forms import Form, Unit, form
@@ -160,16 +161,21 @@ def _read_groups(path: Place, rows: Form, first_path: int, end_path: int) -> Blo
     """Blocks of layout long, one row group in memory, however it is cut into them."""
     part, unit = rows.whole, rows.units[0]
     with _opened(path, rows) as file:
-        row = 0
+        row, again = 0, Again(path, file.metadata, rows.by_step)
         for group in range(file.num_row_groups):
             here = range(row, row + file.metadata.row_group(group).num_rows)
             row = here.stop
             a, b = part.first_path + here.start // part.steps, part.first_path + (row - 1) // part.steps
             if here and b >= first_path and a < end_path:
-                for begin, table in _tables(file, group, rows.needs(part, unit)):
+                whole = here.start % part.steps == 0 and len(here) % part.steps == 0
+                known = again.known(group) if whole else set()
+                needed = [name for name in rows.needs(part, unit) if name not in known]
+                for begin, table in _tables(file, group, needed):
                     for block in pieces(range(here.start + begin, here.start + begin + table.num_rows), part):
                         some = table.slice(rows.start(0, block) - here.start - begin, block.rows)
                         yield block, rows.values(some, block, unit, path)
+                if whole:
+                    again.found_right()
 
 
 def _tables(file: pq.ParquetFile, group: int, names: Sequence[str]) -> Iterator[tuple[int, pa.Table]]:

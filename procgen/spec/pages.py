@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Collection, Iterator, Sequence
 from dataclasses import dataclass
+from io import BytesIO
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, BinaryIO
 
@@ -23,6 +24,7 @@ _VARINTS = (4, 5, 6)
 _LONGEST = 10  # bytes of a varint of 64 bits
 _DEEPEST = 8
 _HEADERS = (256, 1 << 20)  # bytes of a header, of nearly all and of any
+_SMALL = 1 << 18  # bytes of a chunk that are read at once, not header by header
 _WIDEST = 64  # bytes of a value of fixed length: the widest decimals have 32
 
 
@@ -80,7 +82,15 @@ def refuse_bombs(path: Path, found: pq.FileMetaData, names: Collection[str]) -> 
     """
     pages = Pages(path, path.stat().st_size, found)
     with path.open("rb", buffering=0) as file:
-        return sum(pages.values(file, chunk) for chunk in pages.chunks if chunk.name in names)
+        return sum(pages.values(*_brought(file, chunk)) for chunk in pages.chunks if chunk.name in names)
+
+
+def _brought(file: BinaryIO, chunk: Chunk) -> tuple[BinaryIO, Chunk, int]:
+    """What to look for the pages of a chunk in: its bytes and a few more, where they are few; where these begin."""
+    if chunk.begin < 0 or not 0 <= chunk.size <= _SMALL:
+        return file, chunk, 0
+    file.seek(chunk.begin)
+    return BytesIO(file.read(chunk.size + _HEADERS[0])), chunk, chunk.begin
 
 
 @dataclass(frozen=True)
@@ -106,7 +116,7 @@ class Pages:
         of = [field.name for field in found.schema.to_arrow_schema() for _ in range(_leaves(field.type))]
         groups = (found.row_group(k) for k in range(found.num_row_groups))
         self.chunks = [
-            Chunk(of[j], _begin(column), column.total_compressed_size, column, found.schema.column(j).length)
+            Chunk(of[j], chunk_begin(column), column.total_compressed_size, column, found.schema.column(j).length)
             for group in groups
             for j, column in enumerate(map(group.column, range(group.num_columns)))
         ]
@@ -120,7 +130,8 @@ class Pages:
         return here
 
 
-def _begin(column: Any) -> int:
+def chunk_begin(column: Any) -> int:
+    """Where in the file the first page of a column in a row group begins, as its footer says."""
     begin = column.data_page_offset
     if column.has_dictionary_page and column.dictionary_page_offset:
         begin = min(begin, column.dictionary_page_offset)
@@ -148,23 +159,26 @@ def _refuse(path: Any, chunk: Chunk, size: int, values: int, many: bool) -> None
 
 def _pages(path: Any, file: BinaryIO, begin: int, length: int) -> Iterator[tuple[int, int]]:
     """(bytes when unpacked, values) of each page of a column chunk; of dictionaries no values."""
-    end = begin + length
+    end, last = begin + length, (b"", dict[int, int]())
     while 0 <= begin < end:
-        header, size = _header(path, file, begin)
+        last = text, header = _header(path, file, begin, *last)
         packed, kind = header.get(3, -1), header.get(1, -1)
         yield header.get(2, -1), 0 if kind == 2 else header.get(501, header.get(801, 0))
         if packed < 0:
             return
-        begin += size + packed
+        begin += len(text) + packed
 
 
-def _header(path: Any, file: BinaryIO, begin: int) -> tuple[dict[int, int], int]:
-    """The header that begins at a place of a file, and its length."""
+def _header(path: Any, file: BinaryIO, begin: int, last: bytes, found: dict[int, int]) -> tuple[bytes, dict[int, int]]:
+    """The header that begins at a place of a file, and what it says; most are as the `last` one is."""
     for most in _HEADERS:
         file.seek(begin)
-        data, found = file.read(most), dict[int, int]()
+        data = file.read(most)
+        if last and data.startswith(last):
+            return last, found
         try:
-            return found, _struct(data, 0, 0, 0, found)
+            found = {}
+            return data[: _struct(data, 0, 0, 0, found)], found
         except IndexError:  # it goes on
             if len(data) < most:
                 raise Bomb(f"{path} is damaged: it ends inside of a page") from None
