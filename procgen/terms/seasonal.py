@@ -77,9 +77,17 @@ class Seasonal(Known):
         return self._cycle(steps) if self.profile is None else self._profile(steps)
 
     def _cycle(self, steps):
-        # An integer period is reduced in integers, so that a far step keeps its full precision.
-        whole = float(self.period).is_integer()
-        t = (steps % int(self.period) if whole else steps).astype(np.float64)
+        if not float(self.period).is_integer():
+            return self._waves(steps)
+        # An integer period is reduced in integers, so that a far step keeps its full precision; and each step of a
+        # cycle is worked out once.
+        cycle, place = int(self.period), steps % int(self.period)
+        if cycle >= len(steps) or steps.size > len(steps):
+            return self._waves(place)
+        return self._waves(np.arange(cycle).reshape(-1, *steps.shape[1:]))[place.ravel()]
+
+    def _waves(self, steps):
+        t = steps.astype(np.float64)
         x = np.zeros(steps.shape)
         for place, wave in enumerate(self.harmonics, start=1):
             turns = float(wave["order"] or place) * (t - wave["peak"]) / self.period
