@@ -115,6 +115,10 @@ class Uniform(Law):
     name: ClassVar[str] = "uniform"
     source: ClassVar[str] = "from its definition"
 
+    def _from_uniforms(self, u: np.ndarray, out: np.ndarray, scratch: Scratch) -> None:
+        # The bits of `_quantile` at the nearer end: u - 1/2 and 1 - u are exact.
+        np.multiply(np.subtract(u, 0.5, out=out), _ROOT_12, out=out)
+
     def _quantile(self, p: np.ndarray, side: np.ndarray, out: np.ndarray, scratch: Scratch) -> None:
         x = scratch(6, len(p))
         np.multiply(np.subtract(0.5, p, out=x), _ROOT_12, out=x)
