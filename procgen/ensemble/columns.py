@@ -102,15 +102,14 @@ def _as_whole(values: np.ndarray, column: Column, memory: np.ndarray) -> np.ndar
     paths = max(AT_ONCE // max(values.shape[-1], 1), 1)
     for first in range(0, len(values), paths):
         given = values[first : first + paths]
-        with np.errstate(invalid="ignore"):
-            found = given.astype(np.int64)
-        if not (given.size == 0 or (np.abs(given).max() <= WHOLE and (found == given).all())):
+        found = np.rint(given)
+        if given.size and not (-WHOLE <= given.min() <= given.max() <= WHOLE and (found == given).all()):
             bad = given[(np.abs(given) > WHOLE) | (np.rint(given) != given)]
             raise EnsembleError(
                 f"series {column.name} is stored as int64, as whole numbers are, and the value {float(bad[0])!r} "
                 "is not a whole number of at most 2^53 in size; write type: float64 for it in the spec"
             )
-        whole[first : first + paths] = found
+        np.copyto(whole[first : first + paths], found, casting="unsafe")
     return whole
 
 
