@@ -6,14 +6,48 @@ form in their order, so that the bits are the same; what needs more than adding 
 
 from __future__ import annotations
 
+from functools import partial
+
 import numpy as np
 
 from procgen.chance.kernel import compiled_function
 
 _GRID = 2.0**52  # of uniforms
 LEFT = -1.0  # in place of a count that is not found here
-_ABREAST = 64  # counts that are added up side by side
-_NONE = (-1.0, 0.0, 0.0)  # uniform, mean and chance of none in place of what there are too few of
+_ABREAST = 512  # counts that are added up side by side
+_TERMS = 8  # chances that are added up before it is asked who needs more
+
+
+@compiled_function
+def _taken(u, nothing, wanted, chance, below, places):
+    """Uniforms and chances of none into work arrays, and their places; as many as there are."""
+    for j in range(u.shape[0]):
+        wanted[j] = u[j]
+    for j in range(u.shape[0]):
+        chance[j] = nothing[j]
+    for j in range(u.shape[0]):
+        below[j] = nothing[j]
+    for j in range(u.shape[0]):
+        places[j] = j
+
+
+@compiled_function
+def _left(k, size, out, count, wanted, each, chance, below, places, at):
+    """Add so many counts to out at their places, and move those that need more to the front; how many there are."""
+    if k == 0:
+        for j in range(size):
+            out[j] = count[j]
+    else:
+        for j in range(size):
+            out[places[j]] = out[places[j]] + count[j]
+    more = 0
+    for j in range(size):
+        at[more] = j
+        more += wanted[j] > below[j]
+    for i in range(more):
+        j = at[i]
+        wanted[i], each[i], chance[i], below[i], places[i] = wanted[j], each[j], chance[j], below[j], places[j]
+    return more
 
 
 @compiled_function
@@ -58,33 +92,48 @@ def _rare_poisson(wanted, nothing, mean, climb, rare, near, found, most):
     return LEFT
 
 
+@partial(compiled_function, inline="always")
+def _poisson_terms(k, wanted, mean, chance, below):
+    """How many of the counts from k on are not enough, of _TERMS; the chance of the next one, and what is below it."""
+    count = 0.0
+    for i in range(_TERMS):
+        count = count + (1.0 if wanted > below else 0.0)
+        chance = chance * (mean / (float(k + i) + 1.0))
+        below = below + chance
+    return count, chance, below
+
+
 @compiled_function
 def poisson(u, nothing, mean, climb, rare, near, found, most, out):
     """The least counts that are enough for uniforms u, from the chances of none.
 
-    Several are added up abreast until the last has enough: what is added to the others then changes no count.
+    A few chances are added up for all, then for those that need more: what is added beyond the count changes none.
     """
-    wanted, each, chance, below = np.empty((4, _ABREAST))
-    count = np.empty(_ABREAST, np.int64)
+    wanted, each, chance, below, count = np.empty((5, _ABREAST))
+    places, at = np.empty((2, _ABREAST), np.int64)
     for first in range(0, u.shape[0], _ABREAST):
-        size = min(_ABREAST, u.shape[0] - first)
-        for j in range(_ABREAST):
-            wanted[j], each[j], chance[j] = (u[first + j], mean[first + j], nothing[first + j]) if j < size else _NONE
-            below[j], count[j] = chance[j], 0
-        for k in range(climb):
-            more, step = 0, k + 1.0
-            for j in range(_ABREAST):
-                short = np.int64(wanted[j] > below[j])
-                count[j] = count[j] + short
-                more = more + short
-                chance[j] = chance[j] * (each[j] / step)
-                below[j] = below[j] + chance[j]
-            if more == 0:
+        left = min(_ABREAST, u.shape[0] - first)
+        _taken(u[first : first + left], nothing[first : first + left], wanted, chance, below, places)
+        for j in range(left):
+            each[j] = mean[first + j]
+        here = out[first : first + left]
+        for k in range(0, climb, _TERMS):
+            if k == 0:  # said by itself, for half of these divisions are by a power of two
+                for j in range(left):
+                    count[j], chance[j], below[j] = _poisson_terms(0, wanted[j], each[j], chance[j], below[j])
+            else:
+                for j in range(left):
+                    count[j], chance[j], below[j] = _poisson_terms(k, wanted[j], each[j], chance[j], below[j])
+            left = _left(k, left, here, count, wanted, each, chance, below, places, at)
+            if left == 0:
                 break
-        for j in range(size):
-            out[first + j] = float(count[j]) if count[j] < climb else LEFT
-            if wanted[j] > rare:
-                out[first + j] = _rare_poisson(wanted[j], nothing[first + j], each[j], climb, rare, near, found, most)
+        for j in range(here.shape[0]):
+            if here[j] >= climb:
+                here[j] = LEFT
+            if u[first + j] > rare:
+                here[j] = _rare_poisson(
+                    u[first + j], nothing[first + j], mean[first + j], climb, rare, near, found, most
+                )
 
 
 @compiled_function
@@ -101,31 +150,41 @@ def _rare_negative_binomial(wanted, nothing, share, size, ratios, climb, rare, n
     return LEFT
 
 
+@partial(compiled_function, inline="always")
+def _negative_binomial_terms(k, wanted, share, ratios, chance, below):
+    count = 0.0
+    for i in range(_TERMS):
+        count = count + (1.0 if wanted > below else 0.0)
+        chance = chance * (ratios[k + i] * share)
+        below = below + chance
+    return count, chance, below
+
+
 @compiled_function
 def negative_binomial(u, nothing, share, size, ratios, climb, rare, near, found, most, out):
     """The same, of negative binomial counts; share: mean / (mean + size); ratios: (k - 1 + size) / k from k = 1 on."""
-    wanted, each, chance, below = np.empty((4, _ABREAST))
-    count = np.empty(_ABREAST, np.int64)
+    wanted, each, chance, below, count = np.empty((5, _ABREAST))
+    places, at = np.empty((2, _ABREAST), np.int64)
     for first in range(0, u.shape[0], _ABREAST):
         left = min(_ABREAST, u.shape[0] - first)
-        for j in range(_ABREAST):
-            wanted[j], each[j], chance[j] = (u[first + j], share[first + j], nothing[first + j]) if j < left else _NONE
-            below[j], count[j] = chance[j], 0
-        for k in range(climb):
-            more, ratio = 0, ratios[k]
-            for j in range(_ABREAST):
-                short = np.int64(wanted[j] > below[j])
-                count[j] = count[j] + short
-                more = more + short
-                chance[j] = chance[j] * (ratio * each[j])
-                below[j] = below[j] + chance[j]
-            if more == 0:
-                break
+        _taken(u[first : first + left], nothing[first : first + left], wanted, chance, below, places)
         for j in range(left):
-            out[first + j] = float(count[j]) if count[j] < climb else LEFT
-            if wanted[j] > rare:
-                out[first + j] = _rare_negative_binomial(
-                    wanted[j], nothing[first + j], each[j], size, ratios, climb, rare, near, found, most
+            each[j] = share[first + j]
+        here = out[first : first + left]
+        for k in range(0, climb, _TERMS):
+            for j in range(left):
+                count[j], chance[j], below[j] = _negative_binomial_terms(
+                    k, wanted[j], each[j], ratios, chance[j], below[j]
+                )
+            left = _left(k, left, here, count, wanted, each, chance, below, places, at)
+            if left == 0:
+                break
+        for j in range(here.shape[0]):
+            if here[j] >= climb:
+                here[j] = LEFT
+            if u[first + j] > rare:
+                here[j] = _rare_negative_binomial(
+                    u[first + j], nothing[first + j], share[first + j], size, ratios, climb, rare, near, found, most
                 )
 
 
