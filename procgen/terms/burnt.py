@@ -6,22 +6,30 @@ Every path has the bits that it has alone: a recursion that works with rows, one
 from __future__ import annotations
 
 import copy
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from typing import Any
 
 import numpy as np
 
 from procgen.terms.base import Array, Node, State, Term
 
-BURN_TILE = 128  # steps of a burn-in drawn at once, few enough to stay in cache
+BURN_TILE = 128  # most steps of a burn-in drawn at once
+BURN_VALUES = 1 << 17  # about as many values of many paths, few enough to stay in cache
+
+
+def burn_tiles(count: int, paths: int) -> Iterator[tuple[int, int]]:
+    """First step and end of the tiles of a burn-in of so many steps before step 0."""
+    size = min(max(BURN_VALUES // max(paths, 1), 16), BURN_TILE)
+    for first in range(-count, 0, size):
+        yield first, min(first + size, 0)
 
 
 def burnt_by_nodes(
     stack: Any, nodes: Sequence[Node], draw: Callable[[int, int], Array]
 ) -> tuple[dict[str, Array] | None, State]:
-    """`burnt` of the term that a stack of nodes runs as."""
-    head = nodes[0].head
-    lengths = np.repeat([node.term.reach(head)[0] for node in nodes], np.diff(stack.edges))
+    """`burnt` of the term that a stack of nodes runs as; values at as many steps as any of them is asked for."""
+    head = max(node.head for node in nodes)
+    lengths = np.repeat([node.term.reach(node.head)[0] for node in nodes], np.diff(stack.edges))
     rest = stack.gathered([node.term.rest() for node in nodes])
     return burnt(stack.one, lengths, rest, head, _Drawn(int(lengths.max()), draw))
 
@@ -44,41 +52,71 @@ def burnt(
 ) -> tuple[dict[str, Array] | None, State]:
     """Values at the `head` steps before step 0, by output, and the state of all paths after them.
 
+    A tile is run for all paths at once; what comes of those that have not begun by then is thrown away, and those that
+    begin within the tile are run from there (`_joined`).
+
     Parameters
     ----------
     term : whose numbers are rows, one value a path
-    lengths : (paths,), the steps of each burn-in, at least `head`
+    lengths : (paths,), the steps of each burn-in; the values before them say nothing
     rest : the state that they begin from, each (n, paths)
     shocks : the rows before step 0 of all paths, at least as many as the longest has steps
     """
-    order = np.argsort(-lengths, kind="stable")
-    rest = {name: rows[:, order] for name, rows in rest.items()}
-    term, sorted_lengths = chosen(term, order, len(order)), lengths[order]
-    state, joined, active, kept = {name: rows[:, :0] for name, rows in rest.items()}, 0, term, []
-    for first in range(-int(sorted_lengths[0]), 0, BURN_TILE):
-        end = min(first + BURN_TILE, 0)
-        z = shocks[len(shocks) + first : len(shocks) + end][:, order]
-        joining = np.unique(-sorted_lengths[(sorted_lengths <= -first) & (sorted_lengths > -end)]).tolist()
-        for start, stop in zip(cuts := sorted({first, *joining}), [*cuts[1:], end], strict=True):
-            count = int(np.searchsorted(-sorted_lengths, start, side="right"))
-            if count > joined:
-                state = {name: np.concatenate([rows, rest[name][:, joined:count]], 1) for name, rows in state.items()}
-                joined, active = count, chosen(term, slice(count), len(order))
-            values, state = active.recurse((z[start - first : stop - first, :count],), state, None)
-            if stop > -head:  # by then all have joined
-                outputs = values if isinstance(values, dict) else {"": values}
-                kept.append({name: rows[max(-head - start, 0) :] for name, rows in outputs.items()})
-    if joined < len(order):  # some have nothing to forget
-        state = {name: np.concatenate([rows, rest[name][:, joined:]], 1) for name, rows in state.items()}
-    back = np.argsort(order, kind="stable")
-    state = {name: rows[:, back] for name, rows in state.items()}
+    state, kept = rest, []
+    for first, end in burn_tiles(int(lengths.max()), len(lengths)):
+        z = shocks[len(shocks) + first : len(shocks) + end]
+        values, after = term.recurse((z,), state, None)
+        outputs = dict(values) if isinstance(values, dict) else {"": values}
+        late = np.flatnonzero(lengths < -first)
+        if len(late):
+            after = {name: _put(rows, late, rest[name][:, late]) for name, rows in after.items()}
+            within = late[lengths[late] > -end]
+            found = _joined(term, z, within, -first - lengths[within], after)
+            if found and end > -head:
+                outputs = {name: _put(rows, within, found[name]) for name, rows in outputs.items()}
+        state = after
+        if end > -head:
+            kept.append({name: rows[max(-head - first, 0) :] for name, rows in outputs.items()})
     if not head:
         return None, state
-    return {name: np.concatenate([part[name] for part in kept])[:, back] for name in kept[0]}, state
+    return {name: np.concatenate([part[name] for part in kept]) for name in kept[0]}, state
+
+
+def _joined(term: Any, z: Array, joining: Array, starts: Array, state: State) -> dict[str, Array]:
+    """Run the paths `joining` from the rows `starts` of the tile `z` on, their state in place; their values there.
+
+    The steps of a path are cut into powers of two: so paths that begin at any step of the tile take a handful of runs.
+    """
+    at, left, found = starts.copy(), len(z) - starts, {}
+    size = 1 << len(z).bit_length()
+    while len(joining) and (size := size >> 1):
+        some = np.flatnonzero(left & size)
+        if not len(some):
+            continue
+        paths, places = joining[some], at[some] + np.arange(size)[:, None]
+        own = {name: rows[:, paths] for name, rows in state.items()}
+        values, own = chosen(term, paths, z.shape[1]).recurse((z[places, paths],), own, None)
+        for name, rows in own.items():
+            state[name][:, paths] = rows
+        for name, rows in (values if isinstance(values, dict) else {"": values}).items():
+            if name not in found:
+                found[name] = np.zeros((len(z), len(joining)))
+            found[name][places, some] = rows
+        at[some] += size
+    return found
+
+
+def _put(rows: Array, which: Array, part: Array) -> Array:
+    """Rows with the columns of some paths in their place."""
+    made = rows.copy()
+    made[:, which] = part
+    return made
 
 
 def chosen(part: Any, which: Any, paths: int) -> Any:
     """A term, or something inside, with some of its paths: numbers that are rows are cut to them."""
+    if part is None or isinstance(part, float | int | str):
+        return part
     if isinstance(part, np.ndarray):
         return part[which] if part.shape == (paths,) else part
     if isinstance(part, tuple):
