@@ -239,3 +239,22 @@ def thinned(x, new, stay, grid, keys, guide, cells, zero, out):
                 low = low + 1
             out[t, lane] = float(low - zero[n]) + new[t, lane]
     return new.shape[0]
+
+
+@compiled_function
+def thinned_by_path(x, new, stay, grid, places, out):
+    """The same where each path has a table of its own: places (paths, counts, counts), as many as a power of two."""
+    wide = places.shape[1]
+    for t in range(new.shape[0]):
+        last = x if t == 0 else out[t - 1]
+        for lane in range(x.shape[0]):
+            if last[lane] >= wide:
+                return t
+        for lane in range(x.shape[0]):
+            row, place = places[lane, np.int64(last[lane])], np.int64(np.floor(stay[t, lane] * grid))
+            at, step = 0, wide // 2
+            while step > 0:
+                at = at + step if row[at + step - 1] <= place else at
+                step = step // 2
+            out[t, lane] = float(at) + new[t, lane]
+    return new.shape[0]

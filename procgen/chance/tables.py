@@ -47,7 +47,7 @@ def _uniforms(z: Array, out: Array, scratch: Scratch) -> None:
     np.divide(np.add(out, 0.5, out=out), GRID, out=out)
 
 
-def _places(chances: Array) -> Array:
+def places_of(chances: Array) -> Array:
     """P(X <= k) on the grid, of the chances of each k in order; of many laws a row each, which may end in zeros."""
     below = np.add.accumulate(chances, axis=-1)  # one after the other, unlike a sum
     above = np.zeros_like(chances)
@@ -60,7 +60,7 @@ class Table:
 
     def __init__(self, chances: Array, first: int = 0):
         self.first = first
-        self.places = _places(chances)
+        self.places = places_of(chances)
 
     @cached_property
     def guide(self) -> tuple[Array, Array]:
@@ -72,6 +72,11 @@ class Table:
     def counts(self, u: Array) -> Array:
         """The least numbers that are enough for uniforms u, as float64: by a guide (Chen & Asau 1974) or a search."""
         return blockwise(self._looked_up, u)
+
+    def few(self, u: Array) -> Array:
+        """`counts` of uniforms that are too few for a guide to repay."""
+        place = np.floor(u * GRID).astype(np.int64)
+        return (np.searchsorted(self.places, place, side="right") + self.first).astype(np.float64)
 
     def _looked_up(self, u: Array, out: Array, scratch: Scratch) -> None:
         n, (low, open_) = len(u), self.guide
@@ -200,7 +205,7 @@ class Thinning:
                     own[:k] = (1.0 - alpha) * row
                     own[1 : k + 1] = own[1 : k + 1] + alpha * row
                 row = own[: k + 1]
-            places = _places(chances)
+            places = places_of(chances)
             seen = (places > 0) & (places < int(GRID))
             first.append(np.count_nonzero(places < 1, axis=1))
             lengths.append(np.count_nonzero(seen, axis=1))

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from functools import cached_property
 from typing import Any, ClassVar
 
 import numpy as np
@@ -11,6 +12,7 @@ from procgen.chance.portable import exp
 from procgen.chance.tables import NegativeBinomial, Poisson, uniforms
 from procgen.spec.declare import Body, Parameter, Real
 from procgen.terms.base import Ahead, Draw, Term, Unknown, number
+from procgen.terms.rows import each_path
 from procgen.terms.support import COUNTS
 
 UNIFORM = LAWS["uniform"]()
@@ -27,6 +29,8 @@ class Counts(Term):
 
     family = "counts and demand"
     outputs = ("intensity",)
+    by_rows = ("mean",)
+    begins_by_rows = True
 
     def law(self) -> Any:
         """The law at the mean `mean`; it can count with other means, too."""
@@ -55,10 +59,22 @@ class Counts(Term):
     def _counted(self, inputs):
         *body, z = inputs
         if not body:
-            return {"": self.law().counts(uniforms(z)), "intensity": np.full((len(z), 1), float(self.mean))}
+            return {"": self._alone(uniforms(z)), "intensity": np.zeros((len(z), 1)) + self.mean}
         intensity = exp(body[0])
-        np.multiply(intensity, self.mean, out=intensity)
+        intensity = np.multiply(intensity, self.mean, out=None if np.ndim(self.mean) else intensity)
         return {"": self.law().counts(uniforms(z), intensity), "intensity": intensity}
+
+    def _alone(self, u):
+        """Counts whose mean does not move, from a table, or from one a path."""
+        if not np.ndim(self.mean):
+            return self.law().counts(u)
+        if not len(u):
+            return u
+        return np.stack([table.few(u[:, path]) for path, table in enumerate(self._tables)], axis=1)
+
+    @cached_property
+    def _tables(self):
+        return [term.law().table for term in each_path(self)]
 
     def unranked(self):
         return ""

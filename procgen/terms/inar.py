@@ -10,8 +10,10 @@ import numpy as np
 from procgen.chance.laws import LAWS
 from procgen.chance.portable import exp, log1p
 from procgen.chance.tables import GRID, NegativeBinomial, Poisson, Table, thinning, uniforms
+from procgen.chance.thinnings import Thinnings
 from procgen.spec.declare import Parameter, Real
 from procgen.terms.base import Ahead, Draw, Term, number
+from procgen.terms.rows import each_path, row_in
 from procgen.terms.support import COUNTS
 
 UNIFORM = LAWS["uniform"]()
@@ -27,6 +29,8 @@ class Inar(Term):
     source = "McKenzie (1985); Al-Osh & Alzaid (1987); thinning and its laws: Steutel & van Harn (1979)"
     example = "inar: {alpha: 0.6, mean: 5}"
     knows = "mean, covariance σ²α^|lag|, kurtosis, covariance of squares, the law at a step"
+    by_rows = ("alpha", "mean")
+    begins_by_rows = True
     no_past = "the past of negative binomial counts is not drawn; lag less, or leave out `size` for Poisson ones"
     parameters: ClassVar[tuple[Parameter, ...]] = (
         Parameter(
@@ -91,18 +95,33 @@ class Inar(Term):
         if not before.head:
             return None, {}
         # Poisson counts look the same backwards (McKenzie 1985), so the past is drawn from step 0 on down.
-        first = self.law.table.counts(uniforms(before.peek(0)))[0]
+        first = self._counts("first", uniforms(before.peek(0)))[0]
         new, stay = (uniforms(rows[len(rows) - before.head :][::-1]) for rows in before.inputs)
-        return self._moved(self.arrivals.counts(new), stay, first)[::-1].copy(), {}
+        return self._moved(self._counts("arrivals", new), stay, first)[::-1].copy(), {}
 
     def recurse(self, inputs, state, at):
         new, stay = (uniforms(rows) for rows in inputs)
         if "x" in state:
-            out = self._moved(self.arrivals.counts(new), stay, state["x"][0])
+            out = self._moved(self._counts("arrivals", new), stay, state["x"][0])
         else:  # step 0 is drawn from the law of the counts
-            first = self.law.table.counts(new[:1])
-            out = np.concatenate([first, self._moved(self.arrivals.counts(new[1:]), stay[1:], first[0])])
+            first = self._counts("first", new[:1])
+            out = np.concatenate([first, self._moved(self._counts("arrivals", new[1:]), stay[1:], first[0])])
         return out, {"x": out[-1:].copy()}
+
+    @property
+    def first(self) -> Table:
+        return self.law.table
+
+    @cached_property
+    def _each(self) -> list[Inar]:
+        """The terms of all paths where numbers are rows."""
+        return each_path(self)
+
+    def _counts(self, name, u):
+        """Counts of uniforms by the table of this name: `first`, of step 0, or `arrivals`."""
+        if not row_in(self.values):
+            return getattr(self, name).counts(u)
+        return np.stack([getattr(own, name).few(u[:, path]) for path, own in enumerate(self._each)], axis=1)
 
     def _moved(self, new, stay, x):
         """Counts of the steps of `new` arrivals, from x before them."""
@@ -111,16 +130,24 @@ class Inar(Term):
             most = 31
             while most < x.max():
                 most = 2 * most + 1  # up to 2047, for which a table has room
-            rows = self._thinning(most).moved(x, new[done:], stay[done:])
+            if most > KEPT and np.ndim(self.alpha):
+                rows = self._moved_one_by_one(new[done:], stay[done:], x)
+            else:
+                rows = self._thinning(most).moved(x, new[done:], stay[done:])
             out[done : done + len(rows)] = rows
             done += len(rows)
             x = out[done - 1]
         return out
 
+    def _moved_one_by_one(self, new, stay, x):
+        """The same path by path: tables of many large counts would not all find room."""
+        each = enumerate(self._each)
+        return np.stack([own._moved(new[:, p : p + 1], stay[:, p : p + 1], x[p : p + 1])[:, 0] for p, own in each], 1)
+
     def _thinning(self, most):
         """The tables of `alpha`, kept while they are small: there may be as many terms as paths."""
         if self._tables is None or self._tables.most != most:
-            self._tables = thinning(self.alpha, most)
+            self._tables = (Thinnings if np.ndim(self.alpha) else thinning)(self.alpha, most)
         tables = self._tables
         if most > KEPT:
             self._tables = None

@@ -6,6 +6,7 @@ import pytest
 import procgen as pg
 from procgen.chance import counting, kernel
 from procgen.chance.tables import GRID, NegativeBinomial, Poisson, thinning
+from procgen.chance.thinnings import Thinnings
 from procgen.ensemble import draw
 from procgen.ensemble.plan import Block
 from procgen.ensemble.source import SpecSource
@@ -45,6 +46,22 @@ def test_thinning_compiled_is_thinning_plain(alpha, most):
     assert all(np.array_equal(one[: len(plain), 0], plain[:, p]) for p, one in enumerate(alone))
     assert min(map(len, alone)) == 31
     assert len(plain) == 31 and np.array_equal(plain[0], thinning(alpha, most).counts(x, stay[0]) + new[0])
+
+
+@pytest.mark.parametrize("most", [31, 63])
+@pytest.mark.parametrize("compiled", [False, pytest.param(True, marks=needs_numba)])
+def test_thinnings_of_many_paths_are_the_thinning_of_each(most, compiled):
+    alphas = np.concatenate([[0.0, 0.999, 1e-9], RNG.random(300)])
+    shape = (20, len(alphas))
+    new, stay = RNG.poisson(8 * (1 - alphas), shape).astype(float), U[RNG.integers(0, len(U), shape)]
+    new[12, 5] = most + 9.0  # beyond the table: rows end there
+    x = RNG.poisson(8, shape[1]).astype(float)
+    with kernel.compiling(compiled):
+        found = Thinnings(alphas, most).moved(x, new, stay)
+    assert len(found) == 13
+    for p, alpha in enumerate(alphas.tolist()):
+        own = thinning(alpha, most).moved(x[p : p + 1], new[:13, p : p + 1], stay[:13, p : p + 1])
+        assert np.array_equal(found[:, p], own[:, 0]), p
 
 
 @pytest.mark.parametrize("law", [Poisson(0.3), Poisson(5), Poisson(900.0), NegativeBinomial(4, 0.02)], ids=str)
