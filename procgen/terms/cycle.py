@@ -14,6 +14,7 @@ from procgen.chance.kernel import kernel
 from procgen.chance.portable import cos_turns, sin_turns
 from procgen.spec.declare import Parameter, Real, Record, Span
 from procgen.terms.base import number, rows, signed, stated
+from procgen.terms.rows import plain
 from procgen.terms.structural import Disturbed, with_outputs
 
 
@@ -37,6 +38,8 @@ class StochasticCycle(Disturbed):
     example = "stochastic_cycle: {rho: 0.95, period: 20, total_sd: 3}"
     knows = "variance σ²/(1 − ρ²), autocorrelation ρᵏ cos(2πk/P); Gaussian law; strictly stationary"
     outputs = ("star",)
+    by_rows = ("rho", "period", "sd", "total_sd")
+    begins_by_rows = True
     parameters: ClassVar[tuple[Parameter, ...]] = (
         Parameter("rho", "ρ", Real(above=0, below=1), "damping a step; near 1 the cycle is long remembered"),
         Parameter("period", "P", Span(), "length of one turn, above 2 steps", unit="steps"),
@@ -65,19 +68,21 @@ class StochasticCycle(Disturbed):
 
     def disturbance(self):
         """Standard deviation of each disturbance."""
-        return self.sd if self.sd is not None else self.total_sd * float(np.sqrt((1.0 - self.rho) * (1.0 + self.rho)))
+        return self.sd if self.sd is not None else self.total_sd * plain(np.sqrt((1.0 - self.rho) * (1.0 + self.rho)))
 
     def whole(self):
         """Standard deviation of the cycle itself."""
-        return self.total_sd or self.sd / float(np.sqrt((1.0 - self.rho) * (1.0 + self.rho)))
+        if self.total_sd is not None:
+            return self.total_sd
+        return self.sd / plain(np.sqrt((1.0 - self.rho) * (1.0 + self.rho)))
 
     def disturbances(self):
         return {"cycle": self.disturbance(), "cycle_star": self.disturbance()}
 
     def turn(self):
         """ρ cos λ and ρ sin λ."""
-        turns = np.array([1.0 / self.period])
-        return self.rho * float(cos_turns(turns)[0]), self.rho * float(sin_turns(turns)[0])
+        turns = np.float64(1.0) / self.period
+        return self.rho * plain(cos_turns(turns)), self.rho * plain(sin_turns(turns))
 
     def reach(self, head):
         return (0, 0)  # the past is drawn backwards, which for this cycle is the same cycle turning the other way

@@ -55,13 +55,13 @@ class Disturbed(Term):
         raise NotImplementedError
 
     def draws(self):
-        return tuple(Draw(role, NORMAL) for role, sd in self.disturbances().items() if sd)
+        return tuple(Draw(role, NORMAL) for role, sd in self.disturbances().items() if _moves(sd))
 
     def scaled(self, inputs):
         """The disturbances by role, from the shocks that were drawn; zeros for the others."""
         found, left = {}, list(inputs)
         for role, sd in self.disturbances().items():
-            found[role] = sd * left.pop(0) if sd else np.zeros((len(inputs[0]), 1))
+            found[role] = sd * left.pop(0) if _moves(sd) else np.zeros((len(inputs[0]), 1))
         return found
 
     def sources(self, axis):
@@ -101,6 +101,8 @@ class LocalLevel(Disturbed):
     example = "local_level: {level_sd: 38.3, noise_sd: 122.9, start: 1120}"
     knows = "mean and covariance at any steps, of its level too; Gaussian law"
     outputs: ClassVar[tuple[str, ...]] = ("level",)
+    by_rows: ClassVar[tuple[str, ...]] = ("level_sd", "noise_sd", "start")
+    begins_by_rows = True
     parameters: ClassVar[tuple[Parameter, ...]] = (
         spread("level_sd", "σ_η", "level", default=REQUIRED, per="diffusion"),
         NOISE_SD,
@@ -153,6 +155,7 @@ class LocalLinearTrend(LocalLevel):
     example = "local_linear_trend: {level_sd: 0.5, slope_sd: 0.02, noise_sd: 1, start: 100, slope: 0.3}"
     knows = "mean and covariance at any steps, of its level and slope too; Gaussian law"
     outputs = ("level", "slope")
+    by_rows = ("level_sd", "slope_sd", "noise_sd", "start", "slope")
     parameters: ClassVar[tuple[Parameter, ...]] = (
         spread("level_sd", "σ_η", "level", per="diffusion"),
         spread("slope_sd", "σ_ζ", "slope", no_per="a slope is itself a change a step, so its spread scales otherwise"),
@@ -174,7 +177,7 @@ class LocalLinearTrend(LocalLevel):
         if inputs[0].shape[1] < WIDE and not is_compiling():
             return self._summed(inputs, state)
         spreads, left = self.disturbances(), list(inputs)
-        a, b, noise = (left.pop(0) if sd else np.zeros((len(inputs[0]), 1)) for sd in spreads.values())
+        a, b, noise = (left.pop(0) if _moves(sd) else np.zeros((len(inputs[0]), 1)) for sd in spreads.values())
         x, levels, slopes = (np.empty_like(inputs[0]) for _ in range(3))
         first = 0 if state else 1  # step 0 is the start
         if state:
@@ -304,7 +307,7 @@ def _walked(a, state, start, like):
 
 def _backwards(start, increments, head):
     """A walk at steps −head … −1 from its value at step 0 and its increments at steps 0, −1, …"""
-    x, past = np.full(increments[0].shape, float(start)), []
+    x, past = np.zeros(increments[0].shape) + start, []
     for a in increments[:head]:
         x = x - a
         past.append(x)
@@ -314,6 +317,11 @@ def _backwards(start, increments, head):
 def with_outputs(x, **outputs):
     """An expression with hidden outputs."""
     return replace(x, outputs={name: lambda value=value: value for name, value in outputs.items()})
+
+
+def _moves(sd):
+    """Whether there is a disturbance of this standard deviation; of a row, on any path."""
+    return bool(np.any(np.not_equal(sd, 0.0)))
 
 
 def _zero(steps):
