@@ -58,6 +58,9 @@ class Integrated(Term):
     def reach(self, head):
         return (0,) if self.before is not None else self.core.reach(head)
 
+    def reach_by_path(self, head):
+        return None if self.before is not None else self.core.reach_by_path(head)
+
     def begin(self, before):
         n, p, q = len(self.delta), len(self.core.phi), len(self.core.theta)
         if self.before is not None:

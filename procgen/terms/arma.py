@@ -12,7 +12,15 @@ from procgen.spec.declare import Parameter, Reals, Record
 from procgen.terms.base import LAW, SD, TOTAL_SD, Ahead, Term, Unknown, number, rows, signed, stated, without_gap
 from procgen.terms.burnt import burnt
 from procgen.terms.rows import Unlike, alike, of_path, plain, row_in
-from procgen.terms.start import DENSE, JointStart, Member, companion, decay_length, partial_autocorrelations
+from procgen.terms.start import (
+    DENSE,
+    JointStart,
+    Member,
+    companion,
+    decay_length,
+    decay_lengths,
+    partial_autocorrelations,
+)
 
 FORGOTTEN = 1e-9
 LONGEST = 5_000  # coefficients
@@ -140,7 +148,7 @@ class Arma(Term):
 
     @cached_property
     def _memory(self):
-        return max(self._memories)
+        return int(max(self._memories))
 
     @cached_property
     def _memories(self):
@@ -148,6 +156,8 @@ class Arma(Term):
         paths = row_in(self.phi)
         if paths and len(self.phi) > DENSE:
             raise Unlike("long autoregressions start from predictors of their own")
+        if paths and len(self.phi) == 1:
+            return decay_lengths(self.phi[0])
         each = [of_path(self.phi, path) for path in range(paths)] or [self.phi]
         return [decay_length(companion(phi, (), len(phi), 0)[0]) for phi in each]
 
@@ -155,6 +165,11 @@ class Arma(Term):
         if self.before is not None:
             return (0,)
         return (max(self.burn(), head) + len(self.theta),)
+
+    def reach_by_path(self, head):
+        if self.before is not None or not row_in(self.phi):
+            return None
+        return (np.maximum(np.array(self._memories), head) + len(self.theta),)
 
     def begin(self, before):
         p, q = len(self.phi), len(self.theta)

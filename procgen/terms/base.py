@@ -71,6 +71,8 @@ class Before:
         ``normals(k)`` gives (k, paths) standard normals of the term's own role ``start``.
     joint : pair of arrays or None
         Past values and past shocks, newest first, where the term starts jointly with others.
+    heads : array (paths,) or None
+        ``head`` of each path, at most that, where paths are read from as far back as their own numbers ask for.
     """
 
     head: int
@@ -78,6 +80,7 @@ class Before:
     peek: Callable[[int], Array]
     normals: Callable[[int], Array]
     joint: tuple[Array, Array] | None = None
+    heads: Array | None = None
 
 
 class Term:
@@ -157,6 +160,10 @@ class Term:
         """How many steps before step 0 each input must give so that this term can give `head` of its own."""
         return ()
 
+    def reach_by_path(self, head: int) -> tuple[Array, ...] | None:
+        """``reach`` of each path, (paths,) an input, where it differs by path; None where it does not."""
+        return None
+
     def begin(self, before: Before) -> tuple[Array | None, State]:
         """Values at steps -head .. -1 (None when head is 0) and the state just before step 0."""
         return None, {}
@@ -234,7 +241,8 @@ LAW = Parameter("law", "", LawOf(), "law of the shock, standardised to mean 0 an
 class Node:
     """A configured term in its place in the graph.
 
-    ``name`` is the address ``series.label`` that people see; ``key`` is unique and names the state.
+    ``name`` is the address ``series.label`` that people see; ``key`` is unique and names the state. ``head`` is how
+    many values before step 0 are read of it, ``heads`` how many on each path where that differs.
     """
 
     key: str
@@ -242,6 +250,7 @@ class Node:
     term: Term
     inputs: tuple[Any, ...] = ()
     head: int = 0
+    heads: Array | None = None
     place: Any = None
     entry: Any = None
     joint: Any = None

@@ -18,7 +18,7 @@ from procgen.chance.streams import Stream
 from procgen.spec.entries import walk
 from procgen.spec.model import Entry, Series, Shared
 from procgen.terms import catalogue
-from procgen.terms.base import Array, Node, State
+from procgen.terms.base import Array, Node, State, Term
 from procgen.terms.burnt import burnt_by_nodes
 from procgen.terms.combine import Hidden
 from procgen.terms.conditional import Conditional
@@ -28,7 +28,7 @@ from procgen.terms.run import Run
 from procgen.terms.stack import Stack
 from procgen.terms.varied import Varied
 
-# Numbers that say how far back a filter is drawn: a shock that burns in itself begins from there, on each path.
+# Numbers that say how far back a filter is drawn: where a shock begins there itself, it must know that of each path.
 DEEP = frozenset({"phi", "rate"})
 FEW = 16  # steps before step 0 that are drawn for all paths at once
 
@@ -62,8 +62,9 @@ class PartRun(Run):
             super()._begin_node(node)
             return
         values, _ = self.burnt[node.key]
-        for name, rows in (values or {}).items():
-            self._begun[id(node) if name == "" else (id(node), name)] = self._of_whole(rows)
+        for name, rows in (values or {}).items():  # as many as any path is asked for
+            own = self._of_whole(rows)[len(rows) - node.head :]
+            self._begun[id(node) if name == "" else (id(node), name)] = own
         self._states[node.key] = {}  # the whole has it
 
     def _normals(self, stream: Stream, first_step: int, steps: int) -> Array:
@@ -97,7 +98,7 @@ def can_burn_together(stack: Any, nodes: Sequence[Node]) -> bool:
         stack.one is not None
         and isinstance(first.term, Conditional)
         and lone
-        and all(node.term.before is None and node.head == first.head for node in nodes)
+        and all(node.term.before is None for node in nodes)
     )
 
 
@@ -121,9 +122,9 @@ def _takes_rows(entry: Entry) -> bool:
     names = {name for name, value in entry.values.items() if row_in(value)}
     if not names and not shock:
         return True
-    if names & DEEP and entry.shock is not None and entry.shock.kind != "white_noise":
-        return False
     kind = catalogue()[entry.kind]
+    if names & DEEP and entry.shock is not None and entry.shock.kind != "white_noise":
+        return kind.reach_by_path is not Term.reach_by_path and issubclass(catalogue()[entry.shock.kind], Conditional)
     return kind.begins_by_rows and names <= set(kind.by_rows)
 
 

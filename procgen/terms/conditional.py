@@ -90,8 +90,8 @@ class Conditional(Term):
             h, past = rows(self.before["variance"]), rows(self.before["shocks"])
             values = {"": past[len(past) - before.head :], "variance": h[len(h) - before.head :]}
             return values, self.left()
-        if paths := row_in(self.values):
-            lengths = np.maximum(self.burns, before.head)
+        if paths := row_in((self.values, before.heads)):
+            lengths = np.maximum(self.burns, before.head if before.heads is None else before.heads)
             rest = {name: state + np.zeros(paths) for name, state in self.rest().items()}
             return burnt(self, lengths, rest, before.head, before.inputs[0])
         return self._burnt_in(before, self.rest())

@@ -28,12 +28,13 @@ from procgen.terms.varied import Varied
 
 @dataclass(eq=False)
 class Source:
-    """A primary stream of shocks of one law, at its address; `head` as for a node."""
+    """A primary stream of shocks of one law, at its address; `head` and `heads` as for a node."""
 
     name: str
     stream: Stream
     law: Any
     head: int = 0
+    heads: np.ndarray | None = None
     group: Group | None = None
     pace: int = 1
 
@@ -301,8 +302,9 @@ class Graph:
 
     def _heads(self, wanted: list[Node], passed: set[int]) -> None:
         order = self.order(wanted, drawn=True)
+        fewest = {id(node): 0 for node in order}  # what is read of a node on every path
         for node in order:
-            node.head = 0
+            node.head, node.heads = 0, None
         for node in reversed(order):
             for state in followed(node):
                 state.head = max(state.head, node.head)
@@ -312,8 +314,12 @@ class Graph:
                 needs = node.term.reach(node.head)
             except ValueError as error:
                 raise SpecError((Fault(node.place, _too_slow(node, error)),)) from None
-            for part, need in zip(node.inputs, needs, strict=False):
+            own = node.term.reach_by_path(node.head) or needs
+            for part, need, rows in zip(node.inputs, needs, own, strict=False):
                 part.head = max(part.head, need)
+                if np.ndim(rows) or part.heads is not None:
+                    part.heads = np.maximum(fewest[id(part)] if part.heads is None else part.heads, rows)
+                fewest[id(part)] = max(fewest[id(part)], 0 if np.ndim(rows) else need)
 
     def _refuse_missing_past(self, wanted: list[Node]) -> None:
         faults = []

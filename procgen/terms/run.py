@@ -141,6 +141,7 @@ class Run:
             peek=lambda i: self._peek(node.inputs[i]),
             normals=lambda count: self._start_normals(self._source_below(node), 0, count),
             joint=self._joint_rows(node) if node.joint else None,
+            heads=node.heads,
         )
         values, state = node.term.begin(before)
         if isinstance(values, dict):

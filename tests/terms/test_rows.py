@@ -93,6 +93,39 @@ BODIES = {
         {"ma": {"theta": 0.5, "shock": {"stochastic_volatility": {"sd": drawn(1, 2), "phi": drawn(0, 0.9),
                                                                   "eta": drawn(0.1, 0.3)}}}}
     ],
+    "ar with a garch shock": [lagged(3, {"ar": {"phi": drawn(0.1, 0.9), "shock": GARCH}})],
+    "arma with a shock of one threshold": [
+        {"arma": {"phi": [drawn(0.1, 0.5), drawn(-0.3, 0.3)], "theta": [0.4, 0.2],
+                  "shock": {"gjr_garch": {"sd": 1.0, "alpha": 0.05, "gamma": 0.1, "beta": 0.6}}}}
+    ],
+    "pulled with a shock of a past": [
+        {"ornstein_uhlenbeck": {"rate": drawn(0.5, 2), "mean": 1.0,
+                                "shock": {"garch": {"omega": 0.1, "alpha": 0.1, "beta": drawn(0.5, 0.8)}}}}
+    ],
+    "level": [lagged(3, {"local_level": {"level_sd": drawn(0.1, 1), "noise_sd": drawn(0, 1), "start": drawn(5, 9)}})],
+    "level, noise on some": [
+        {"local_level": {"level_sd": 0.3, "noise_sd": {"draw": {"choice": [0.0, 0.5]}, "over": "path"}}}
+    ],
+    "trending level": [
+        lagged(3, {"local_linear_trend": {"level_sd": drawn(0.1, 1), "slope_sd": 0.1, "noise_sd": drawn(0, 1),
+                                          "start": drawn(5, 9), "slope": drawn(-1, 1)}})
+    ],
+    "smooth trend": [{"local_linear_trend": {"slope_sd": drawn(0.1, 1), "start": 3.0}}],
+    "cycle": [lagged(3, {"stochastic_cycle": {"rho": drawn(0.5, 0.99), "period": 7.5, "sd": drawn(1, 2)}})],
+    "whole cycle": [{"stochastic_cycle": {"rho": drawn(0.5, 0.99), "period": 5.0, "total_sd": drawn(1, 2)}}],
+    "counts": [lagged(3, {"poisson": {"mean": drawn(0.5, 40)}})],
+    "counts of a body": [
+        {"poisson": {"mean": drawn(0.5, 60), "of": [{"ar": {"phi": 0.5, "total_sd": drawn(0.1, 0.5)}}]}},
+        {"poisson": {"mean": drawn(0.5, 9), "of": [{"trend": {"slope": 0.1}}]}, "as": "known"},
+    ],
+    "wide counts": [
+        {"negative_binomial": {"mean": drawn(0.5, 9), "size": 1.5}},
+        {"negative_binomial": {"mean": drawn(0.5, 60), "size": 4.0, "of": [{"white_noise": {"sd": 0.3}}]}, "as": "y"},
+    ],
+    "counts with memory": [lagged(3, {"inar": {"alpha": drawn(0, 0.95), "mean": drawn(0.5, 20)}})],
+    "counts with one memory": [{"inar": {"alpha": 0.6, "mean": drawn(0.5, 90)}}],
+    "wide counts with memory": [{"inar": {"alpha": drawn(0.1, 0.9), "mean": 4.0, "size": 2.0}}],
+    "many counts with memory": [{"inar": {"alpha": drawn(0.1, 0.9), "mean": drawn(20, 90)}}],
     "arch": [{"arch": {"omega": drawn(0.1, 1), "alpha": drawn(0.1, 0.8)}}],
     "spread": [{"white_noise": {"spread": drawn(1, 2), "law": {"stable": {"alpha": 1.5}}}}],
     "pulled": [lagged(3, {"ornstein_uhlenbeck": {"rate": drawn(0.01, 2), "mean": drawn(-2, 2), "total_sd": 1.5}})],
@@ -169,7 +202,8 @@ def test_one_graph_is_made_for_all_paths(monkeypatch):
     [
         {"stochastic_volatility": {"sd": 1.0, "phi": drawn(0.1, 0.9), "eta": 0.3, "rho": -0.5}},
         {"stochastic_volatility": {"sd": 1.0, "phi": 0.5, "eta": 0.3, "rho": drawn(-0.5, 0.5)}},
-        {"ar": {"phi": drawn(0.1, 0.9), "shock": GARCH}},  # the garch begins where its reader does, on each path
+        {"ar": {"phi": drawn(0.1, 0.9), "shock": {"stochastic_volatility": {"sd": 1.0, "phi": 0.5, "eta": 0.3,
+                                                                             "rho": -0.5}}}},
     ],
 )
 def test_a_term_that_begins_path_by_path_still_does(entry):
