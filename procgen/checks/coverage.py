@@ -6,7 +6,7 @@ from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
-from procgen.checks.words import START, joined
+from procgen.checks.words import START, alike, joined
 
 if TYPE_CHECKING:
     from procgen.checks.verdict import Check
@@ -106,8 +106,9 @@ def _line(each: Coverage) -> str:
     if each.still:
         return "every value, for nothing in it is left to chance"
     reasons: dict[str, list[str]] = {}
+    said = alike(each.missing.values())
     for side, why in each.missing.items():
-        reasons.setdefault(why, []).append(side)
+        reasons.setdefault(said[why], []).append(side)
     missing = "; ".join(f"{', '.join(sides)}, because: {why}" for why, sides in reasons.items())
     judged = ", ".join(each.judged) or "nothing"
     return judged + (f"; not judged: {missing}" if missing else "")

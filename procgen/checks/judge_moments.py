@@ -15,6 +15,7 @@ from procgen.checks.limits import limit, sample_of
 from procgen.checks.probes import CrossPlan, SeriesPlan
 from procgen.checks.start import start_checks
 from procgen.checks.verdict import Check
+from procgen.checks.words import side_by_side
 from procgen.theory.lumps import atoms_of
 
 _QUANTILES = (0.01, 0.99)
@@ -53,7 +54,8 @@ def _constant(gather: Gather, column: int, i: int) -> Check:
     fault = ""
     if n and max(off, spread) > room:
         seen = mean + float(gather.moments.mean[k])
-        fault = f"every path must be {mean:.6g} here; the paths' mean is {seen:.6g}, their sd {spread:.3g}"
+        stated, given = side_by_side(mean, seen, 6)
+        fault = f"every path must be {stated} here; the paths' mean is {given}, their sd {spread:.3g}"
     check = Check.fact(plan.name, "constant", _at(plan, i), fault, "the same known value on every path")
     check.kind, check.theory, check.estimate = "level", mean, mean + float(gather.moments.mean[k])
     return check

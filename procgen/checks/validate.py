@@ -31,6 +31,7 @@ from procgen.checks.support import Possible, possible_of, vanishes
 from procgen.checks.tied import tied_checks
 from procgen.checks.untied import UntiedSums, untied_checks
 from procgen.checks.verdict import Check, Verdict
+from procgen.checks.words import side_by_side
 from procgen.ensemble.plan import Block
 
 _PATH = re.compile(r"\b(paths? )(\d+(?: and \d+)?)\b")
@@ -241,7 +242,8 @@ def _known(gather: Gather, series: SeriesPlan) -> Check:
     gap, _, _, seen, stated = gather.gaps.get(series.name, (0.0, 0, 0, math.nan, math.nan))
     scale = float(np.max(np.abs(series.mean)))
     room = series.grain / 2 + 1e-9 * max(scale, 1e-300)
-    fault = "" if gap <= room else f"a value is {seen:.10g}, stated {stated:.10g}, without any chance in the spec"
+    given, wanted = side_by_side(seen, stated, 10)
+    fault = "" if gap <= room else f"a value is {given}, stated {wanted}, without any chance in the spec"
     check = Check.fact(series.name, "values", "all steps", fault, "every value is the known one")
     check.kind, check.theory, check.estimate = "level", stated, seen
     return check

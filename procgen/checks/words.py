@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 import re
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
@@ -57,6 +57,8 @@ _DRAWN = ": distribution function"  # how the check of a drawn parameter ends
 FARTHEST, FARTHEST_SHOCK = "farthest value", "shocks: farthest"
 _STAYS = re.compile(r"share: (.+) after \1, (up to \d+ steps?|longer)")
 GAP, TOGETHER = " of the gap", " of the sum"  # how the checks of a combination of series end, as `relations` has them
+_ALL_DIGITS = 17  # that tell any two numbers apart
+_COUNT = re.compile(r"(?<![\w.,−-])\d[\d,]*(?= (?:pairs? of )?(?:paths?|shocks?|cases?|steps?|values?)\b)")
 _LEAST_P = math.log(1e-300)  # below this a p is only said to be smaller
 
 
@@ -77,6 +79,29 @@ def number(x: float | None, digits: int = 5) -> str:
     if math.isinf(x):
         return "∞" if x > 0 else "−∞"
     return f"{x:.{digits}g}".replace("-", "−")
+
+
+def side_by_side(x: float | None, y: float | None, digits: int = 5) -> tuple[str, str]:
+    """Two numbers beside each other, with as many digits more as it takes to see that they differ."""
+    if x is None or y is None or x == y:
+        return number(x, digits), number(y, digits)
+    shown = ((number(x, k), number(y, k)) for k in range(digits, _ALL_DIGITS + 1))
+    return next((both for both in shown if both[0] != both[1]), (number(x, digits), number(y, digits)))
+
+
+def alike(notes: Iterable[str]) -> dict[str, str]:
+    """For each note, what is said in its place: notes that differ in counts alone are told once, with their range."""
+    groups: dict[str, list[str]] = {}
+    for note in dict.fromkeys(notes):
+        groups.setdefault(_COUNT.sub("#", note), []).append(note)
+    said = {}
+    for group in groups.values():
+        counts = zip(*([int(each.replace(",", "")) for each in _COUNT.findall(note)] for note in group), strict=True)
+        ranges = [f"{min(each):,}" + f"–{max(each):,}" * (min(each) < max(each)) for each in counts]
+        first, *rest = _COUNT.split(group[0])
+        text = first + "".join(a + b for a, b in zip(ranges, rest, strict=True))
+        said |= dict.fromkeys(group, text if len(group) > 1 else group[0])
+    return said
 
 
 def p_text(log_p: float) -> str:
@@ -137,8 +162,8 @@ def sentence(groups: list[list[Check]]) -> str:
         return f"{who}{top.note}{follow}"
     if top.kind == "structure":
         return f"{who}structure: {top.note}{_more(first)}"
-    if top.what == "values":
-        return f"{who}level: {top.note}"
+    if top.what in ("values", "constant") and top.note:
+        return f"{who}level: {top.note}{_more(first)}"
     p = f", p {p_text(top.log_p)}" if top.log_p is not None else ""
     return f"{who}{sort_of(top)}: {_says(top)} ({_seen(top)}{p}){_more(first)}{follow}"
 
@@ -173,7 +198,8 @@ def _seen(top: Check) -> str:
     where = f" at {top.probe}" if top.probe else ""
     between = f" between {joined(top.series.split(' ~ '))}" if top.what.endswith(GAP) else ""
     between = f" of {joined(top.series.split(' ~ '))} in sd" if top.what.endswith(TOGETHER) else between
-    return f"{name_of(top)}{between}{where} is {number(top.estimate, 4)}, stated {number(top.theory, 4)}"
+    seen, stated = side_by_side(top.estimate, top.theory, 4)
+    return f"{name_of(top)}{between}{where} is {seen}, stated {stated}"
 
 
 def _more(group: list[Check]) -> str:

@@ -12,7 +12,7 @@ from typing import TYPE_CHECKING
 
 from procgen.checks import coverage
 from procgen.checks.attribution import departures
-from procgen.checks.words import many, name_of, number, p_text, sentence, tally
+from procgen.checks.words import many, name_of, number, p_text, sentence, side_by_side, tally
 from procgen.report.pictures import gallery as galleries
 from procgen.report.pictures import page
 from procgen.report.pictures.gallery import Gallery
@@ -194,7 +194,7 @@ def _row(row: Check) -> str:
         width = min(4.0, -row.log_p / math.log(10) * 0.35)
         p = f'<span class="bar" style="width:{width:.2f}rem"></span>{p_text(row.log_p)}'
     cells = [breakable(text) for text in (row.series, name_of(row), row.probe)]
-    figures = [number(x) for x in (row.theory, row.estimate, row.standard_error)]
+    figures = [*side_by_side(row.theory, row.estimate), number(row.standard_error)]
     return (
         f'<tr class="{row.outcome}">'
         + "".join(f"<td>{cell}</td>" for cell in cells)

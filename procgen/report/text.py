@@ -9,7 +9,7 @@ from collections.abc import Iterator, Sequence
 from typing import TYPE_CHECKING
 
 from procgen.checks import coverage
-from procgen.checks.words import many, name_of, number, p_text, tally
+from procgen.checks.words import alike, many, name_of, number, p_text, side_by_side, tally
 
 if TYPE_CHECKING:
     from procgen.checks.verdict import Check, Verdict
@@ -85,7 +85,7 @@ def _worst(rows: Sequence[Check], verdict: Verdict) -> list[str]:
     head = ("", "series", "check", "at", "theory", "estimate", "p")
     cells = [
         (
-            bar(row.log_p or 0.0, level), row.series, name_of(row), row.probe, number(row.theory), number(row.estimate),
+            bar(row.log_p or 0.0, level), row.series, name_of(row), row.probe, *side_by_side(row.theory, row.estimate),
             p_text(row.log_p or 0.0),
         )
         for row in rows
@@ -150,9 +150,10 @@ def _hung(text: str) -> list[str]:
 def _not_judged(rows: Sequence[Check]) -> Iterator[str]:
     """Reasons, with the checks that they stopped."""
     groups: dict[tuple[str, str], Counter[str]] = {}
-    for row in rows:
-        if row.outcome in ("untestable", "reported"):
-            groups.setdefault((row.series, row.note), Counter())[row.what] += 1
+    left = [row for row in rows if row.outcome in ("untestable", "reported")]
+    said = alike(row.note for row in left)
+    for row in left:
+        groups.setdefault((row.series, said[row.note]), Counter())[row.what] += 1
     for (series, note), whats in groups.items():
         parts = ", ".join(f"{what} ×{count}" if count > 1 else what for what, count in whats.items())
         yield f"{series + ': ' if series else ''}{parts}: {note}"

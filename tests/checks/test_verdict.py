@@ -8,8 +8,10 @@ import pytest
 from statsmodels.stats.multitest import multipletests
 
 from procgen.checks.judge import Sample, normal_mean, sample_mean, unit
+from procgen.checks.validate import gathered, judged, plan_of
 from procgen.checks.verdict import COLUMNS, Check, Verdict, holm
-from procgen.checks.words import p_text
+from procgen.checks.words import alike, p_text, side_by_side
+from tests.studies.departures import draw, spec_of
 
 
 def test_holm_of_four():
@@ -184,3 +186,33 @@ def test_a_correlation_is_called_so_only_where_it_can_be_one():
 def test_p_is_rounded_to_two_digits_and_not_down_to_a_power_of_ten():
     said = [p_text(math.log(p)) for p in (0.00012, 9.9e-6, 9.96e-6, 1.04e-6, 3.14159e-200)]
     assert said == ["0.0001", "9.9e−6", "1e−5", "1e−6", "3.1e−200"]
+
+
+def test_two_numbers_that_differ_are_shown_to_differ():
+    pairs = ((120.0004, 120.0), (0.03, 0.0), (5.0, 5.0), (None, 2.0), (1 + 2**-52, 1.0))
+    said = [side_by_side(*both, 4) for both in pairs]
+    assert said[:4] == [("120.0004", "120"), ("0.03", "0"), ("5", "5"), ("–", "2")]
+    assert said[4][0] != said[4][1]
+    row = of("mean", 120.0004, -200.0, "level", probe="step 4", theory=120.0)
+    verdict = Verdict([row], 0.001)
+    assert "mean at step 4 is 120.0004, stated 120, p" in verdict.headline[0]
+    assert "120  120.0004" in verdict.to_text()
+
+
+def test_a_known_value_that_is_missed_says_by_how_much():
+    values = draw(spec := spec_of([{"constant": 120}, {"random_walk": {"start": 0, "sd": 1}}], 150, 20, 3))
+    values["x"] = values["x"] + 4e-4  # the first value of a walk is known
+    (row,) = [row for row in judged(gathered(plan_of(spec), [(0, 0, values)])) if row.what == "constant"]
+    assert "must be 120 here; the paths' mean is 120.0004, their sd" in row.note
+    assert Verdict([row], 0.001).headline == [f"x: level: {row.note}"]
+
+
+def test_reasons_that_differ_in_counts_alone_are_told_once():
+    notes = [f"{n} paths are too few for the skewed tail that a p of 2e-05 lies in" for n in (264, 268, 266)]
+    rows = [Check("x", "slope", f"lag {n}", "memory", outcome="untestable", note=note) for n, note in enumerate(notes)]
+    text = Verdict(rows, 0.001).to_text()
+    assert text.count("too few for the skewed tail") == 2  # once by side, once by check
+    assert "slope ×3: 264–268 paths are too few for the skewed tail that a p of 2e-05 lies in" in " ".join(text.split())
+    other = "only 40 paths of at least 100: reported, not judged"
+    assert alike([*notes, other])[other] == other
+    assert alike(["1,000 paths are few", "999 paths are few"])["999 paths are few"] == "999–1,000 paths are few"
