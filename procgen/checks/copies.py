@@ -147,7 +147,7 @@ class Watch:
         self.run = np.ones(paths, dtype=np.int64)
         self.longest: Run = [1, -first_path, 0]
         self.stayed = 0  # values that equal the one before
-        self.marks, self.waiting = Marks.none(), [Marks.none()]
+        self.marks, self.waiting, self.many = Marks.none(), [Marks.none()], 0
 
     def absorb(self, x: NDArray) -> None:
         """Look at the next tile (steps, paths)."""
@@ -205,11 +205,12 @@ class Watch:
 
     def _keep(self, marks: Marks) -> None:
         self.waiting.append(marks)
-        if sum(len(marks.hashes) for marks in self.waiting) > KEPT:
+        self.many += len(marks.hashes)
+        if self.many > KEPT:
             self._settle()
 
     def _settle(self) -> None:
-        self.marks, self.waiting = self.marks.joined(*self.waiting), []
+        self.marks, self.waiting, self.many = self.marks.joined(*self.waiting), [], 0
 
     def finish(self) -> tuple[Run, Marks]:
         """The longest run of equal values, and the marks."""

@@ -191,12 +191,12 @@ class ShockSums:
             self.rows.update({min(paths, GROUP): len(g) * -(-paths // GROUP)} if whole else _runs(known))
 
     def _add_profile(self, counts: NDArray, sums: Sequence[NDArray] | NDArray, first_step: int) -> None:
-        places = (first_step + np.arange(len(counts))) // self.width
+        """Add what is known of each step of a tile, one step after another."""
         for row, values in zip(self.profile, (counts, *sums), strict=True):
             if self.width == 1:
                 row[first_step : first_step + len(counts)] += values
             else:
-                np.add.at(row, places, values)
+                _add_in_turn(row, values, first_step, self.width)
 
     def finish(self, lane: ShockLane) -> None:
         """Close a range of paths whose last step has been absorbed."""
@@ -235,6 +235,17 @@ class ShockSums:
 
 
 SHOCK_ARRAYS = ("sums", "counts", "paths", "profile", "memory", "cluster", "asymmetry", "square", "stretched")
+
+
+def _add_in_turn(row: NDArray, values: NDArray, first: int, width: int) -> None:
+    """Add values that begin at place `first` to the entries of a row that `width` of them share, in their order."""
+    head = min(-first % width, len(values))
+    whole = head + (len(values) - head) // width * width
+    for start, end in ((0, head), (head, whole), (whole, len(values))):
+        if start < end:
+            some = values[start:end].reshape(-1, min(width, end - start))
+            entries = slice((first + start) // width, (first + start) // width + len(some))
+            row[entries] = np.add.accumulate(np.column_stack([row[entries], some]), axis=1)[:, -1]
 
 
 def _runs(known: NDArray) -> dict[int, int]:

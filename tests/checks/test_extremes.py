@@ -6,7 +6,8 @@ import numpy as np
 import pytest
 from scipy import stats
 
-from procgen.checks import tails
+import procgen as pg
+from procgen.checks import extremes, tails
 from procgen.checks.extremes import KEPT, Reach, checks, merged
 from procgen.checks.structure import Structure
 from procgen.checks.words import name_of
@@ -198,3 +199,15 @@ def test_tail_is_lifted_by_its_limit_far_out():
     # phi(z) / Q(z) = z + 1/z - 2/z^3 ... (Abramowitz & Stegun 26.2.12)
     for z in (9e3, 2e4, 1e8, 1e40):
         assert tails.lift(z, 24.0) == pytest.approx(z**4, rel=1e-6)
+
+
+@pytest.mark.parametrize(("term", "asked"), [({"ar": {"phi": 0.5, "sd": 1}}, 1), ({"random_walk": {"sd": 1}}, 4)])
+def test_what_does_not_depend_on_the_step_is_computed_once(monkeypatch, term, asked):
+    theory = pg.theory({"seed": 1, "paths": 1, "time": {"steps": 10}, "series": {"x": [{"constant": 3}, term]}})["x"]
+    monkeypatch.setattr(extremes, "_CHUNK", 64)
+    reach, calls, original = Reach(theory, 0.0, 256), [], type(theory).mean
+    monkeypatch.setattr(type(theory), "mean", lambda self, steps: (calls.append(1), original(self, steps))[1])
+    mean, sd = reach._at(30, 200)
+    assert len(calls) == asked
+    np.testing.assert_array_equal(mean, theory.mean(np.arange(30, 230)))
+    np.testing.assert_array_equal(sd, np.sqrt(theory.variance(np.arange(30, 230))))

@@ -10,7 +10,7 @@ from scipy import stats
 from procgen.chance.laws import LAWS
 from procgen.checks.judge_shocks import cross_checks, shock_checks
 from procgen.checks.scores import BINS, Scores, bin_counts
-from procgen.checks.shocks import CrossSums, ShockLane, ShockSums
+from procgen.checks.shocks import CrossSums, ShockLane, ShockSums, _add_in_turn
 from tests.studies.departures import draw, spec_of, verdict
 
 NORMAL, STUDENT = LAWS["normal"](), LAWS["student_t"](df=6)
@@ -143,3 +143,15 @@ def test_a_pair_with_shocks_that_cannot_be_recovered_is_not_judged():
     values["b"][0, 1500:] = 0.0
     rows = [row for row in verdict(stated, values).rows if row.what == "shocks: correlation between series"]
     assert [row.outcome for row in rows] == ["untestable"] and "not above 0" in rows[0].note
+
+
+@pytest.mark.parametrize("first", [0, 3, 7, 64])
+@pytest.mark.parametrize("count", [1, 4, 7, 100])
+def test_steps_that_share_an_entry_are_added_one_after_another(first, count):
+    values, width = np.random.default_rng(count).standard_normal(count), 7
+    row = np.random.default_rng(first).standard_normal(40)
+    expected = row.copy()
+    for k in range(count):  # the bits of a plain loop
+        expected[(first + k) // width] += values[k]
+    _add_in_turn(row, values, first, width)
+    np.testing.assert_array_equal(row, expected)
