@@ -51,18 +51,23 @@ class StretchSums:
 
     def _add_blocks(self, short: NDArray, lane: StretchLane) -> None:
         blocks = _halved(short, 2)
-        held = np.concatenate([lane.blocks, blocks])
+        held = np.concatenate([lane.blocks, blocks]) if len(lane.blocks) else blocks
         whole = len(held) - len(held) % _GROWTH
         lane.blocks = held[whole:]
         for k, sums in enumerate((short, blocks, _halved(held[:whole], 2))):
             squares = sums * sums
             known = np.isfinite(squares)
-            lane.counts[k] += np.count_nonzero(known)
-            if not known.all():
+            count = np.count_nonzero(known)
+            lane.counts[k] += count
+            if count < squares.size:
                 squares = np.where(known, squares, 0.0)
             if k == 0:
                 squares = _halved(squares, 2)  # those of a block at once
-            lane.totals[k] = np.add.accumulate(np.concatenate([lane.totals[k][None], squares]), axis=0)[-1]
+            if len(squares) <= _GROWTH:
+                for row in squares:
+                    lane.totals[k] += row
+            else:
+                lane.totals[k] = np.add.accumulate(np.concatenate([lane.totals[k][None], squares]), axis=0)[-1]
 
     def finish(self, lane: StretchLane) -> None:
         """Close a range of paths."""
