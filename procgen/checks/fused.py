@@ -31,15 +31,17 @@ def scored(g, left, scale, counts, clusters, worst, u):
         row, out, bits = g[t], clusters[t], g[t].view(np.int64)
         far = np.int64(0)
         for p in range(paths):
-            place = min(max(row[p] * scale + 0.5 * cells, 0.0), cells)
-            cell = np.int64(place)
-            u[p] = left[cell] + (left[cell + 1] - left[cell]) * (place - cell)
-            far = max(far, bits[p] & _SIZE)
+            u[p] = min(max(row[p] * scale + 0.5 * cells, 0.0), cells)
+        for p in range(paths):  # one by one: processors fetch from tables no faster in vectors
+            whole = np.int64(u[p])
+            cell = np.uint64(whole)
+            low = left[cell]
+            u[p] = low + (left[cell + np.uint64(1)] - low) * (u[p] - whole)
+            counts[np.uint64(min(np.int64(u[p] * bins), bins - 1))] += 1
         for p in range(paths):
             v = u[p] - 0.5
             out[p] = v * v * _STEEP - _FALL
-        for p in range(paths):
-            counts[min(np.int64(u[p] * bins), bins - 1)] += 1
+            far = max(far, bits[p] & _SIZE)
         worst[t] = far
 
 
