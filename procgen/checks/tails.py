@@ -13,6 +13,7 @@ from numpy.typing import ArrayLike, NDArray
 _LOG2 = math.log(2.0)
 SAFE = 1.6
 _FAR = 1e4  # standard deviations
+_NEAR = 1e-9  # of a saddle point
 _RANKS = -1e4  # logarithm of a tail, below which it only ranks: Chernoff's bound is enough
 
 
@@ -144,17 +145,23 @@ def _upper(x: float, w: NDArray, d: NDArray) -> float:
 
 
 def _saddle(x: float, w: NDArray, d: NDArray, s_max: float, sd: float) -> float:
-    """s > 0 with K'(s) = x, by bisection."""
+    """s > 0 with K'(s) = x, by Newton's steps within halving bounds; any s near it gives the same integral."""
+    twice, weights = 2 * w, d * w
     low, high = 0.0, s_max
     if not math.isfinite(s_max):
         high = 1.0 / sd
-        while float(np.sum(d * w / (1 - 2 * w * high))) < x and high < 1e12 / sd:
+        while float(np.dot(weights, 1 / (1 - twice * high))) < x and high < 1e12 / sd:
             high *= 2
+    s = 0.5 * (low + high)
     for _ in range(40):
-        middle = 0.5 * (low + high)
-        slope = float(np.sum(d * w / (1 - 2 * w * middle))) if middle < s_max else math.inf
-        low, high = (middle, high) if slope < x else (low, middle)
-    return low
+        each = 1 / (1 - twice * s)
+        above = float(np.dot(weights, each)) - x
+        low, high = (s, high) if above < 0 else (low, s)
+        step = above / float(np.dot(weights * twice, each * each))
+        if abs(step) < _NEAR * s:
+            break
+        s = s - step if low < s - step < high else 0.5 * (low + high)
+    return s
 
 
 def _contour(x: float, w: NDArray, d: NDArray, s0: float, s_max: float) -> float:
@@ -168,19 +175,20 @@ def _contour(x: float, w: NDArray, d: NDArray, s0: float, s_max: float) -> float
     base = -0.5 * float(np.sum(d * np.log1p(-2 * w * s0))) - s0 * x
     if base < _RANKS:
         return base
-    total, start, chunk = 0.0, 0, 128
+    total, start, chunk = 0.0, 0, 32
     while start < 400_000:
         v = step * np.arange(start, start + chunk)
         s = s0 + 1j * v + bend * v * v
-        logs = np.log(1 - 2 * np.multiply.outer(s, w))
-        exponent = -0.5 * (logs * d).sum(axis=1) - s * x - base
+        re, im = 1 - np.multiply.outer(s.real, 2 * w), -np.multiply.outer(v, 2 * w)
+        # the logarithm of a complex number in parts: several times as fast as the library's
+        exponent = -0.25 * np.log(re * re + im * im) @ d - 0.5j * (np.arctan2(im, re) @ d) - s * x - base
         value = np.exp(exponent) * (1j + 2 * bend * v) / s
         if start == 0:
             value[0] *= 0.5
         total += float(value.imag.sum())
         if np.abs(value[-1]) < 1e-15 * max(abs(total), 1e-300):
             break
-        start += chunk
+        start, chunk = start + chunk, min(2 * chunk, 128)
     return min(0.0, base + math.log(max(total * step / math.pi, 1e-300)))
 
 
