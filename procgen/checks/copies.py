@@ -131,6 +131,11 @@ class Marks:
         marks = marks.at(marks.hashes <= last)
         return marks if len(marks.hashes) == KEPT else marks.ordered().at(slice(KEPT))
 
+    def repeated(self) -> Marks:
+        """Those whose hash is there more than once."""
+        hashes = np.sort(self.hashes)
+        return self.at(np.isin(self.hashes, np.unique(hashes[1:][hashes[1:] == hashes[:-1]])))
+
     def ordered(self) -> Marks:
         return self.at(np.lexsort((self.steps, self.paths, self.values, self.hashes)))
 
@@ -236,12 +241,13 @@ def checks(
             f"{step + length - 1}, as if carried forward"
         )
     yield Check.fact(series, STUCK, "all steps", fault, "no value stays where chance moves it")
-    fault = _copied(marks.ordered(), repeats.length, paths, prints)
+    fault = _copied(marks, repeats.length, paths, prints)
     yield Check.fact(series, COPIED, "all pairs", fault, "no stretch of steps was found twice")
 
 
 def _copied(marks: Marks, length: int, paths: NDArray, prints: NDArray) -> str:
     """The stretch that is there twice with the most marks, in words; nothing where there is none."""
+    marks = marks.repeated().ordered()
     same = (marks.hashes[1:] == marks.hashes[:-1]) & (marks.values[1:] == marks.values[:-1])
     order = np.argsort(paths, kind="stable")
     whole = prints[order[np.searchsorted(paths, marks.paths, sorter=order)]]
