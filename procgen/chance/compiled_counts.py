@@ -189,14 +189,19 @@ def negative_binomial(u, nothing, share, size, ratios, climb, rare, near, found,
 
 
 @compiled_function
-def looked_up(u, low, open_, places, shift, first, out):
-    """The least numbers that are enough for uniforms u, by the guide of a `Table`, or by halves."""
-    last = low.shape[0] - 1
-    for i in range(u.shape[0]):
-        place = np.int64(np.floor(u[i] * _GRID))
-        cell = min(max(place >> shift, 0), last)
-        found = low[cell]
-        if open_[cell]:
+def looked_up(u, low, places, shift, first, out):
+    """The least numbers that are enough for uniforms u, by the guide of a `Table`, or by halves where it is below 0."""
+    last, at = low.shape[0] - 1, np.empty(_ABREAST, np.int64)
+    for begin in range(0, u.shape[0], _ABREAST):
+        given, found = u[begin : begin + _ABREAST], out[begin : begin + _ABREAST]
+        for i in range(given.shape[0]):
+            found[i] = low[min(max(np.int64(np.floor(given[i] * _GRID)) >> shift, 0), last)]
+        more = 0
+        for i in range(given.shape[0]):
+            at[more] = i
+            more += found[i] < 0.0
+        for j in range(more):
+            place = np.int64(np.floor(given[at[j]] * _GRID))
             a, b = 0, places.shape[0]
             while a < b:
                 middle = (a + b) >> 1
@@ -204,8 +209,9 @@ def looked_up(u, low, open_, places, shift, first, out):
                     a = middle + 1
                 else:
                     b = middle
-            found = float(a)
-        out[i] = found + first
+            found[at[j]] = float(a)
+        for i in range(given.shape[0]):
+            found[i] = found[i] + first
 
 
 @compiled_function

@@ -63,11 +63,12 @@ class Table:
         self.places = places_of(chances)
 
     @cached_property
-    def guide(self) -> tuple[Array, Array]:
-        """For each cell of equal uniforms the number that its first place gives, and whether its last gives another."""
+    def guide(self) -> Array:
+        """For each cell of equal uniforms the number that its first place gives; -1 where its last gives another."""
         cells = np.arange(_CELLS, dtype=np.int64) << _SHIFT
         low = np.searchsorted(self.places, cells, side="right")
-        return low.astype(np.float64), np.searchsorted(self.places, cells + ((1 << _SHIFT) - 1), side="right") > low
+        open_ = np.searchsorted(self.places, cells + ((1 << _SHIFT) - 1), side="right") > low
+        return np.where(open_, -1.0, low)
 
     def counts(self, u: Array) -> Array:
         """The least numbers that are enough for uniforms u, as float64: by a guide (Chen & Asau 1974) or a search."""
@@ -79,17 +80,17 @@ class Table:
         return (np.searchsorted(self.places, place, side="right") + self.first).astype(np.float64)
 
     def _looked_up(self, u: Array, out: Array, scratch: Scratch) -> None:
-        n, (low, open_) = len(u), self.guide
+        n = len(u)
         if is_compiling():
             from procgen.chance import compiled_counts
 
-            compiled_counts.looked_up(u, low, open_, self.places, _SHIFT, self.first, out)
+            compiled_counts.looked_up(u, self.guide, self.places, _SHIFT, self.first, out)
             return
         place, cell = scratch(0, n, np.int64), scratch(1, n, np.int64)
         np.copyto(place, np.floor(np.multiply(u, GRID, out=out), out=out), casting="unsafe")
         np.right_shift(place, _SHIFT, out=cell)
-        at = np.flatnonzero(np.take(open_, cell, out=scratch(0, n, np.bool_), mode="clip"))
-        np.take(low, cell, out=out, mode="clip")
+        np.take(self.guide, cell, out=out, mode="clip")
+        at = np.flatnonzero(np.less(out, 0.0, out=scratch(0, n, np.bool_)))
         out[at] = np.searchsorted(self.places, place[at], side="right")
         np.add(out, self.first, out=out)
 
