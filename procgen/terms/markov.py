@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping, Sequence
+from functools import cached_property
 from typing import Any, ClassVar, NamedTuple
 
 import numpy as np
@@ -249,6 +250,10 @@ class States:
         self.shares = occupancy(self.p)
         self.start = None if values["start"] == STATIONARY else self.owners.index(list(names).index(values["start"]))
 
+    @cached_property
+    def _steps(self) -> Array:
+        return thresholds(self.p)
+
     @property
     def theory(self) -> tuple[Any, ...]:
         """What the axis asks of a chain: transitions, shares, start, names and owners."""
@@ -290,7 +295,7 @@ class States:
             s, done = self.first(z[0]), 1
             out[0] = s
         if len(z) > done:
-            s = move(z[done:], thresholds(self.p), len(self.p) - 1, s, out[done:])
+            s = move(z[done:], self._steps, len(self.p) - 1, s, out[done:])
         return self._seen(out), state if s is None else {"s": s[None, :]}
 
     def chances(self, steps: int, state: State) -> Array:

@@ -6,6 +6,7 @@ from typing import ClassVar
 
 import numpy as np
 
+from procgen.chance.kernel import is_compiling, kernel
 from procgen.spec.declare import Body, Parameter
 from procgen.spec.named import Named
 from procgen.terms import markov
@@ -14,6 +15,13 @@ from procgen.terms.combine import Hidden
 from procgen.terms.flag import Flag
 from procgen.terms.followed import Shown
 from procgen.terms.support import EVERYTHING, either, finite
+
+
+@kernel
+def shown_in(states, number, rows, others, out):
+    """The rows in the state of this number, and the others elsewhere, in one pass."""
+    for t in range(out.shape[0]):
+        out[t] = np.where(states[t] == number, rows[t], others[t])
 
 
 class Regimes(Term):
@@ -100,7 +108,12 @@ class Regimes(Term):
     def _shown(self, branches, states):
         shown = branches[0]
         for number, rows in enumerate(branches[1:], start=1):
-            shown = np.where(states == number, rows, shown)
+            if is_compiling():
+                found = np.empty(np.broadcast_shapes(states.shape, shown.shape, rows.shape))
+                shown_in(states, float(number), rows, shown, found)
+                shown = found
+            else:
+                shown = np.where(states == number, rows, shown)
         return {"": shown, "regime": states}
 
     def shown(self, output):
