@@ -44,7 +44,7 @@ def farthest(
 ) -> list[Far]:
     """The KEPT farthest of those known, of earlier steps, and a tile (steps, paths) of scores g, shocks z, values x.
 
-    Of scores of one size the earlier are kept. `worst` (steps,): the largest size of each step, where it is known; only
+    Of scores of one size the earlier are kept. `worst` (steps,): a bound on the sizes of each step, where one is known; only
     scores larger than `least` are wanted.
     """
     least = max(least, known[-1][0]) if len(known) == KEPT else least

@@ -13,11 +13,12 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.chance.kernel import is_compiling
 from procgen.checks import apart, farthest
 from procgen.checks.blocks import BLOCK, GROUP, Window, across, add_lagged, add_products, compiled, in_one_pass, scratch
 from procgen.checks.scores import BINS, Scores, cluster_scores
 from procgen.checks.stretches import LENGTHS, StretchLane, StretchSums
-from procgen.checks.uniforms import bin_counts, uniforms
+from procgen.checks.uniforms import CELLS_OF_SD, bin_counts, lefts, uniforms
 
 MEMORY_LAGS = (1, 2, 3, 4, 5, 6, 8, 12)
 CLUSTER_LAGS = (1, 2, 3, 5)
@@ -126,20 +127,29 @@ class ShockSums:
         if at_once:
             self._compiled(z, g, first_step, lane, z if x is None else x)
             return
+        clusters, worst = self._scored(g, known, whole)
         values, first = z if x is None else x, first_step + offset
-        self.far = farthest.farthest(g, z, values, lane.first_path, first, self.far, None, self.least)
-        u = uniforms(g)
-        self.counts += bin_counts(u if whole else u[known])
-        clusters = cluster_scores(u)
+        self.far = farthest.farthest(g, z, values, lane.first_path, first, self.far, worst, self.least)
         self._single(z, g, lane, offset)
         self._along(g, clusters, lane, offset)
         self._across(g, known, whole, first_step + offset, lane, offset)
         self.stretches.absorb(g, first_step + offset, lane.stretches)
 
+    def _scored(self, g: NDArray, known: NDArray, whole: bool) -> tuple[NDArray, NDArray | None]:
+        """Count the uniforms of scores; their cluster scores, and a bound on the sizes of each step where one is known."""
+        if not (whole and is_compiling() and g.flags.c_contiguous):
+            u = uniforms(g)
+            self.counts += bin_counts(u if whole else u[known])
+            return cluster_scores(u), None
+        height = BLOCK if len(g) % BLOCK == 0 else len(g)  # steps that go as one row: of few paths one is short
+        rows, clusters = g.reshape(len(g) // height, -1), np.empty(g.shape)
+        worst = np.empty(len(rows), np.int64)
+        room = scratch(1, rows.shape[1], 1)[0]
+        in_one_pass("scored", rows, lefts(), CELLS_OF_SD, self.counts, clusters.reshape(rows.shape), worst, room)
+        return clusters, np.repeat(worst.view(float), height)
+
     def _compiled(self, z: NDArray, g: NDArray, first_step: int, lane: ShockLane, x: NDArray) -> None:
         """The same as the rest of `absorb`, where all shocks are known, in fewer passes."""
-        from procgen.checks.uniforms import CELLS_OF_SD, lefts
-
         steps, paths = g.shape
         lane.view, clusters = lane.scores.push(g), lane.clusters.room(steps)
         lane.sizes = clusters
