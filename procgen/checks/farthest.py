@@ -44,8 +44,8 @@ def farthest(
 ) -> list[Far]:
     """The KEPT farthest of those known, of earlier steps, and a tile (steps, paths) of scores g, shocks z, values x.
 
-    Of scores of one size the earlier are kept. `worst` (steps,): a bound on the sizes of each step, where one is known; only
-    scores larger than `least` are wanted.
+    Of scores of one size the earlier are kept. `worst` (steps,): a bound on the sizes of each step, where one is
+    known; only scores larger than `least` are wanted.
     """
     least = max(least, known[-1][0]) if len(known) == KEPT else least
     with np.errstate(invalid="ignore"):

@@ -136,7 +136,7 @@ class ShockSums:
         self.stretches.absorb(g, first_step + offset, lane.stretches)
 
     def _scored(self, g: NDArray, known: NDArray, whole: bool) -> tuple[NDArray, NDArray | None]:
-        """Count the uniforms of scores; their cluster scores, and a bound on the sizes of each step where one is known."""
+        """Count the uniforms of scores; their cluster scores, and a bound on the sizes of each step, or None."""
         if not (whole and is_compiling() and g.flags.c_contiguous):
             u = uniforms(g)
             self.counts += bin_counts(u if whole else u[known])
