@@ -7,13 +7,14 @@ text where numbers should be.
 from __future__ import annotations
 
 import re
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator, Mapping, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.checks import handled, judge, ordered
 from procgen.checks.blocks import GROUP
 from procgen.checks.clock import ClockError, NoTime, Times, mismatch, refuse_numbers, steps_on_grid
 from procgen.checks.files import TableError, read_file
@@ -24,6 +25,7 @@ from procgen.checks.roles import Names, listed, option
 from procgen.checks.verdict import Check
 from procgen.checks.words import joined, many
 from procgen.ensemble.plan import Block
+from procgen.terms.varied import Varied
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -40,6 +42,7 @@ _NO_NUMBERS = {
 }  # kind of a column -> what it holds, and how to mend it
 _NO_NUMBERS |= {"boolean": _NO_NUMBERS["b"], "complex": _NO_NUMBERS["c"], "timedelta": _NO_NUMBERS["m"]}
 _NO_NUMBERS |= {each: _NO_NUMBERS["M"] for each in ("datetime", "datetime64", "date", "time", "period")}
+_LOOKED_AT = 1 << 26  # values of a series that are looked at all together
 BLOCK = 1 << 22  # values of one series that are handed on at once
 
 
@@ -95,11 +98,39 @@ class Table:
                 f"{where}: steps repeat, and there is no column path; {listed('path', names.found)}; "
                 f"{option('path')}"
             )
+        stated = self.spec.paths
+        if self.paths != stated:
+            more = f"{many(self.paths, 'path')}, where the spec states {stated:,}: judged on those that are there"
+            self._say("paths", more, "reported")
         self._place(path, step)
         self._values = {name: self._numbers(frame[column], name) for name, column in names.series.items()}
 
     def checks(self) -> list[Check]:
-        return self._checks
+        return [*self._checks, *self._order_of_paths()]
+
+    def causes(self, names: Sequence[str]) -> Iterator[Check]:
+        """What was done to the values of these series, where it shows."""
+        for plan in self._plan.series:
+            if plan.name in names and plan.theory.random and not plan.unknown and self.rows <= _LOOKED_AT:
+                x = self._block(self._values[plan.name], 0, self.paths)
+                if np.isfinite(x).all():
+                    yield from handled.causes(plan.name, x, plan, self.spec.series[plan.name].decimals)
+
+    def _order_of_paths(self) -> Iterator[Check]:
+        """Whether paths go on where others end, or share draws; not where the spec gives each numbers of its own."""
+        if self.paths <= judge.FEW_PATHS or Varied(self.spec).parameters:
+            return
+        steps = [0, min(1, self.steps - 1), max(self.steps - 2, 0), self.steps - 1]
+        order = np.array(ordered.natural(self.labels))
+        rows = {name: np.column_stack([self._at(x, step) for step in steps])[order] for name, x in self._values.items()}
+        moved = {p.name: not p.unknown and len(p.drawn) > 0 and p.drawn[-1] > 0 for p in self._plan.series}
+        yield from ordered.checks(rows, moved)
+
+    def _at(self, values: NDArray, step: int) -> NDArray:
+        """The values of all paths at a step; NaN where there is none."""
+        wanted = np.arange(self.paths) * self.steps + step
+        found = np.minimum(np.searchsorted(self._key, wanted), len(self._key) - 1)
+        return np.where(self._key[found] == wanted, values[self._order[found]], np.nan)
 
     def about(self) -> dict[str, Any]:
         return {
@@ -118,7 +149,7 @@ class Table:
         from procgen.checks.validate import plan_of
 
         no_cluster(scheduler)
-        plan = plan_of(self.spec, self.steps, self.same_draws)
+        plan = self._plan = plan_of(self.spec, self.steps, self.same_draws)
         return in_one_process(plan, self.blocks(), Block(0, self.paths, 0, self.steps), progress)
 
     def blocks(self) -> Iterator[tuple[int, int, Mapping[str, np.ndarray]]]:

@@ -98,7 +98,15 @@ def validate(
         rows = [row for row in rows if not _only_absent(row, gather, absent)]
     for row in rows:
         _as_known(row, origin)
-    return Verdict(rows, false_alarm, origin.about(), origin)
+    verdict = Verdict(rows, false_alarm, origin.about(), origin)
+    if verdict.agrees is False and hasattr(origin, "causes"):
+        ours = {known: name for name, known in origin.columns.items()}
+        departing = [name for row in rows if row.outcome == "departs" for name in row.series.split(" ~ ")]
+        found = list(origin.causes([ours.get(name, name) for name in departing]))
+        for row in found:
+            _as_known(row, origin)
+        verdict.explain(found)
+    return verdict
 
 
 def _as_known(row: Check, origin: Any) -> None:

@@ -126,7 +126,11 @@ class Verdict:
         self.origin = origin  # where the values came from: a report reads some of them again for its pictures
         self.rows = list(rows)
         _judge(self.rows, false_alarm)
-        self.rows.sort(key=_rank)
+        self.explain([])
+
+    def explain(self, causes: Sequence[Check]) -> None:
+        """Put facts that say why something departs before all that departs."""
+        self.rows = sorted([*causes, *self.rows], key=_rank)
         self.counts = dict(Counter(row.outcome for row in self.rows))
 
     @property

@@ -56,6 +56,7 @@ _CORRELATIONS = {
 _DRAWN = ": distribution function"  # how the check of a drawn parameter ends
 FARTHEST, FARTHEST_SHOCK = "farthest value", "shocks: farthest"
 _STAYS = re.compile(r"share: (.+) after \1, (up to \d+ steps?|longer)")
+CONTINUED, SHIFTED = "end of a path and start of the next", "values some paths apart"  # as `ordered` has them
 GAP, TOGETHER = " of the gap", " of the sum"  # how the checks of a combination of series end, as `relations` has them
 _ALL_DIGITS = 17  # that tell any two numbers apart
 _COUNT = re.compile(r"(?<![\w.,−-])\d[\d,]*(?= (?:pairs? of )?(?:paths?|shocks?|cases?|steps?|values?)\b)")
@@ -94,7 +95,7 @@ def alike(notes: Iterable[str]) -> dict[str, str]:
     groups: dict[str, list[str]] = {}
     for note in dict.fromkeys(notes):
         groups.setdefault(_COUNT.sub("#", note), []).append(note)
-    said = {}
+    said: dict[str, str] = {}
     for group in groups.values():
         counts = zip(*([int(each.replace(",", "")) for each in _COUNT.findall(note)] for note in group), strict=True)
         ranges = [f"{min(each):,}" + f"–{max(each):,}" * (min(each) < max(each)) for each in counts]
@@ -160,7 +161,7 @@ def sentence(groups: list[list[Check]]) -> str:
     follow = f"; also {also}, which may follow from it" if also else ""
     if top.what in (FARTHEST, FARTHEST_SHOCK):
         return f"{who}{top.note}{follow}"
-    if top.kind == "structure":
+    if top.kind == "structure" and top.log_p is None:
         return f"{who}structure: {top.note}{_more(first)}"
     if top.what in ("values", "constant") and top.note:
         return f"{who}level: {top.note}{_more(first)}"
@@ -172,6 +173,8 @@ def _says(top: Check) -> str:
     """The departure in general, with its direction where the check has one."""
     if sort_of(top) != top.kind:
         return f"{'smaller' if (top.estimate or 0.0) < (top.theory or 0.0) else 'larger'} than stated"
+    if top.what in (CONTINUED, SHIFTED):
+        return _of_order(top)
     if of_stays(top):
         return "lengths of stays are not as stated"
     if top.what.endswith(_BETWEEN_PATHS):
@@ -182,6 +185,17 @@ def _says(top: Check) -> str:
     if is_signed(top) and top.kind in _MORE_LESS and top.estimate is not None and top.theory is not None:
         way = _MORE_LESS[top.kind][int(top.estimate < top.theory)]
     return _SAYS[top.kind].format(way)
+
+
+def _of_order(top: Check) -> str:
+    """What it means that the order of paths tells."""
+    if top.kind != "structure":
+        return _SAYS["dependence"]
+    if top.what == CONTINUED:
+        return "each path goes on where the one before ended, as windows cut from one long path do"
+    a, b = top.series.split(" ~ ")
+    shift = top.probe.removeprefix("path ")
+    return f"path p of {b} repeats the draws of path p{shift} of {a}, as where a seed is the sum of two numbers"
 
 
 def _seen(top: Check) -> str:

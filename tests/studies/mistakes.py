@@ -44,6 +44,9 @@ MISTAKES: Mapping[str, str] = {
     "standard deviation taken for variance": "load: spread: ",
     "season starts one step late": "day: level: ",
     "t(5) not divided by its own sd": "gain: spread: ",
+    "paths cut from one long series": "flow: structure: each path goes on where the one before ended",
+    "paths standardised one by one": "load: structure: each path has mean 0 and standard deviation 1",
+    "season's phase drawn by path": "day: structure: the season of 12 steps is in each path at a time of its own",
 }
 COLUMNS = {"path": "run", "time": "at", "flow": "m3", "load": "kW", "day": "Tag", "gain": "profit"}
 
@@ -55,13 +58,19 @@ def simulated(mistake: str, seed: int, paths: int = PATHS, steps: int = STEPS) -
     lag = 2 if mistake.startswith("φ at lag 2") else 1
     sd = {"variance taken for standard deviation": 4.0, "standard deviation taken for variance": 2**0.5}.get(mistake, 2)
     scale = 0.5 if mistake.startswith("t(5)") else 0.5 / (5 / 3) ** 0.5
-    flow = rng.standard_normal((paths, BURN + steps))
-    for t in range(lag, BURN + steps):
+    count, long = (1, BURN + paths * steps) if mistake.startswith("paths cut") else (paths, BURN + steps)
+    flow = rng.standard_normal((count, long))
+    for t in range(lag, long):
         flow[:, t] += phi * flow[:, t - lag]
-    step = np.arange(steps) + (1 if mistake.startswith("season") else 0)
+    load = sd * rng.standard_normal((paths, steps))
+    if mistake.startswith("paths standardised"):
+        load = (load - load.mean(axis=1, keepdims=True)) / load.std(axis=1, keepdims=True)
+    step = np.arange(steps) + (1 if mistake.startswith("season starts") else 0)
+    if mistake.startswith("season's phase"):
+        step = step + rng.uniform(0, 12, (paths, 1))
     return {
-        "flow": 5 + flow[:, BURN:],
-        "load": sd * rng.standard_normal((paths, steps)),
+        "flow": 5 + flow[:, BURN:].reshape(paths, steps),
+        "load": load,
         "day": np.cos(2 * np.pi * (step - 4) / 12) + rng.standard_normal((paths, steps)),
         "gain": scale * rng.standard_t(5, (paths, steps)),
     }
