@@ -159,3 +159,21 @@ def add_lagged(total: NDArray, later: NDArray, earlier: NDArray, lag: int, steps
         return 0
     end = len(earlier) - lag
     return add_products(total, later[len(later) - count :], earlier[end - count : end], offset + steps - count)
+
+
+def add_lags(totals: NDArray, a: NDArray, b: NDArray, lags: Sequence[int], steps: int, ready: int = 0) -> list[int]:
+    """`add_lagged` for each row of `totals`: a goes with b so many steps earlier, at a lag below 0 b with a.
+
+    Of the last `steps` steps and of what came before them, only those count that are not before step `ready` of these.
+    """
+    sides = [(a, b, lag) if lag >= 0 else (b, a, -lag) for lag in lags]
+    new = [min(steps, steps - ready - lag) for _, _, lag in sides]
+    if compiled(totals.shape[1]) and a.flags.c_contiguous and b.flags.c_contiguous:
+        known = [max(min(n, len(x), len(y) - lag), 0) for n, (x, y, lag) in zip(new, sides, strict=True)]
+        sums = totals.copy()
+        in_one_pass("lagged", a, b, steps, np.array(lags), np.array(known), sums, np.empty(totals.shape[1]))
+        if np.isfinite(sums).all():
+            totals[...] = sums
+            return [totals.shape[1] * count for count in known]
+    rows = zip(totals, sides, new, strict=True)
+    return [add_lagged(total, *side, n, steps - n) for total, side, n in rows]

@@ -89,6 +89,20 @@ def plain_sums(z, totals, block):
         _add_products(totals[3], z, 0, z, 0, first, end, block)
 
 
+def lagged(a, b, steps, lags, counts, totals, block):
+    """Add products of two windows' views to totals (lags, paths): at each lag over the last so many of the steps.
+
+    a at t goes with b at t − lag, or at a lag below 0 b at t with a at t + lag.
+    """
+    a_held, b_held = a.shape[0] - steps, b.shape[0] - steps
+    for first in range(0, steps, BLOCK):
+        end = min(first + BLOCK, steps)
+        for k in range(lags.shape[0]):
+            start = max(first, steps - counts[k])
+            if start < end:
+                _add_products(totals[k], a, a_held + min(lags[k], 0), b, b_held - max(lags[k], 0), start, end, block)
+
+
 def add_products(total, a, b, both, offset, block):
     """Add a·b (or a, unless `both`) to total, in blocks, where the rows begin `offset` steps after a block."""
     steps, first = a.shape[0], 0

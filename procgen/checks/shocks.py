@@ -15,7 +15,18 @@ from numpy.typing import NDArray
 
 from procgen.chance.kernel import is_compiling
 from procgen.checks import apart, farthest
-from procgen.checks.blocks import BLOCK, GROUP, Window, across, add_lagged, add_products, compiled, in_one_pass, scratch
+from procgen.checks.blocks import (
+    BLOCK,
+    GROUP,
+    Window,
+    across,
+    add_lagged,
+    add_lags,
+    add_products,
+    compiled,
+    in_one_pass,
+    scratch,
+)
 from procgen.checks.scores import BINS, Scores, cluster_scores
 from procgen.checks.stretches import LENGTHS, StretchLane, StretchSums
 from procgen.checks.uniforms import CELLS_OF_SD, bin_counts, lefts, uniforms
@@ -294,10 +305,9 @@ class CrossSums:
 
         Of these, and of what came before them, only those count that are not before step `ready` of the new ones.
         """
-        for k, lag in enumerate(self.lags):
-            later, earlier = (a, b) if lag >= 0 else (b, a)
-            new = min(steps, steps - ready - abs(lag))
-            self.sums[lag][0] += add_lagged(totals[k], later, earlier, abs(lag), new, steps - new)
+        counts = add_lags(totals[: len(self.lags)], a, b, self.lags, steps, ready)
+        for lag, count in zip(self.lags, counts, strict=True):
+            self.sums[lag][0] += count
 
     def beside(self, a: ShockLane, b: ShockLane, steps: int, totals: NDArray) -> None:
         """Add what else is looked at in the last `steps` steps of two series."""

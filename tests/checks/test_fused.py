@@ -6,7 +6,7 @@ import pytest
 from procgen.chance import kernel
 from procgen.chance.laws import LAWS
 from procgen.checks import lane as room
-from procgen.checks.blocks import WIDE, add_products
+from procgen.checks.blocks import WIDE, add_lags, add_products
 from procgen.checks.copies import Repeats, Watch
 from procgen.checks.lane import Pass
 from procgen.checks.scores import Scores
@@ -173,3 +173,26 @@ def test_products_of_two(offset, steps):
         return {"one": one, "two": two, "counts": counts}
 
     same(*both(run))
+
+
+@needs_numba
+@pytest.mark.parametrize("unknown", [False, True])
+@pytest.mark.parametrize("ready", [-300, -1, 1, 70, 500])
+@pytest.mark.parametrize("held", [(12, 12), (0, 12), (-40, 3)])
+def test_products_of_two_series_at_lags(unknown, ready, held):
+    steps, lags = 200, (-12, -2, -1, 0, 1, 2, 5)
+    a, b = (RNG.standard_normal((steps + more, 40)) for more in held)
+    a[30, 7] = np.nan if unknown else a[30, 7]
+
+    def run():
+        totals = np.ones((len(lags), 40))
+        return {"counts": np.array(add_lags(totals, a, b, lags, steps, ready)), "totals": totals}
+
+    same(*both(run))
+    counts, expected = run()["counts"], []
+    for lag in lags:
+        later, earlier = (a, b) if lag >= 0 else (b, a)
+        at = [(steps - t, steps - t + abs(lag)) for t in range(max(ready + abs(lag), 0), steps)]
+        pairs = [later[-i] * earlier[-j] for i, j in at if i <= len(later) and j <= len(earlier)]
+        expected.append(np.count_nonzero(np.isfinite(pairs)))
+    np.testing.assert_array_equal(counts, expected)
