@@ -22,7 +22,7 @@ class CompoundPoisson(Term):
     purpose = "the sum of the jumps that fall into a step, a Poisson number of them: claims, shocks, rainfalls"
     source = "Feller (1971), ch. VI.4; Merton (1976)"
     example = "compound_poisson: {rate: {value: 3, per: day}, sd: 2}"
-    knows = "mean, variance, kurtosis and covariance of squares where the jumps have these moments"
+    knows = "mean, variance, kurtosis and covariance of squares where the jumps have these; λm with their number"
     outputs = ("jumps",)
     parameters: ClassVar[tuple[Parameter, ...]] = (
         Parameter("rate", "λ", Real(above=0, at_most=1000), "mean number of jumps a step", unit="1/step", per="rate"),
@@ -105,7 +105,9 @@ class CompoundPoisson(Term):
         law = (lambda _: Jumps(self.rate, m, sd).distribution()) if self.law.gaussian else None
         total = axis.drawn(key, UNIFORM, rate, (0.0, m), central, law, lumpy=True, highest=self.law.highest_moment)
         poisson = (0.0, 1.0), (0.0, 1.0), (0.0, 1.0, 3.0)
-        jumps = axis.drawn(f"{key}.jumps", UNIFORM, rate, (0.0, 1.0), poisson, discrete=True, beside=total)
+        jumps = axis.drawn(
+            f"{key}.jumps", UNIFORM, rate, (0.0, 1.0), poisson, discrete=True, beside=total, together=(0.0, m)
+        )
         return axis.offering(total, jumps=jumps)
 
     def equation(self, *inputs):

@@ -101,6 +101,7 @@ class Drawn(Process):
         self.driver, self.body, self.level, self.path = driver, body, level, path
         self.law, self.discrete, self.lumpy = law, discrete, lumpy or discrete
         self.central = [polynomial(body, each) for each in central]
+        self.together: dict[int, Expression] = {}  # covariance given L with what is drawn with it at the same step
         self._powers: dict[tuple[int, int], Expression] = {}  # by the orders at one step, and at another beside it
 
     def covariance(self, t, s):
@@ -118,6 +119,12 @@ class Drawn(Process):
         if isinstance(other.detail, Held):
             return other.detail.with_expression(alone_of(self, own), s, t)
         if isinstance(other.detail, Drawn):
+            together = self.together.get(id(other.detail)) or other.detail.together.get(id(self))
+            if together is not None:
+                same = mean_at(together, np.where(t == s, t, 0))
+                apart = self.level.sources and other.detail.level.sources
+                total = at_any(self.level, other.detail.level, t, s) if apart else np.zeros(t.shape)
+                return total + np.where(t == s, same, 0.0)
             drawn = [source for x in (self.driver, other.detail.driver) for source in x.sources]
             if not any(self.body.space.dependent(a, b) for a, b in combinations(drawn, 2)):
                 return at_any(self.level, other.detail.level, t, s)
@@ -256,12 +263,14 @@ class Stating:
         lumpy: bool = False,
         highest: float = np.inf,
         beside: Expression | None = None,
+        together: Sequence[float] | None = None,
     ) -> Expression:
         """Values drawn from the stream `key` of a law, independently from step to step given a body.
 
         Their mean, and their central moments of orders 2, 3 and 4, are polynomials in the body (coefficients, lowest
         power first); `given` makes the frozen SciPy law at a value of the body; `highest` is the order below which
-        moments exist. `beside` is what else is drawn with them, in ways that have no closed covariance.
+        moments exist. `beside` is what else is drawn with them; `together` is the covariance of both at a step given
+        the body, a polynomial in it, where both are drawn given the same body. None: it has no closed form.
         """
         level = polynomial(body, mean)
         path = _mean_path(level, self.name)
@@ -269,6 +278,10 @@ class Stating:
         shocks = shocks if beside is None else shocks + beside
         process = Drawn(self.name, shocks, body, level, path, central, given, discrete, lumpy)
         process.highest_moment = float(highest)
+        if beside is not None and together is not None:
+            for source in beside.sources:
+                if isinstance(source.detail, Drawn):
+                    process.together[id(source.detail)] = polynomial(body, together)
         return self.process(process, path)
 
     def inflated(self, passes: Expression, body: Expression, share: float) -> Expression:

@@ -210,3 +210,22 @@ def test_given_numbers(after, rest):
     x = theory(graph.spec, graph)["x"]
     np.testing.assert_array_equal(x.mean(np.arange(7)), [3, 5, 4, 6, *rest])
     assert not x.variance(np.arange(7)).any()
+
+
+@pytest.mark.parametrize("law", ["normal", "laplace"])
+def test_jumps_and_their_number_go_together(law):
+    """E of the number times the sum, number by number: E n · n m, less the product of means (SciPy's Poisson)."""
+    rate, m, sd = 0.7, 1.5, 2.0
+    graph = graph_of(
+        "  a: [{use: j}]\n  b: [{use: j.compound_poisson.jumps}]\n  c: [{use: j}, {use: j.compound_poisson.jumps}]",
+        rest=f"shared:\n  j: [{{compound_poisson: {{rate: {rate}, mean: {m}, sd: {sd}, law: {law}}}}}]",
+    )
+    known = theory(graph.spec, graph)
+    n = np.arange(60)
+    chance, given = stats.poisson.pmf(n, rate), n * m
+    expected = chance @ (n * given) - (chance @ n) * (chance @ given)
+    at = np.array([4, 5])
+    for cross in (known.cross("a", "b"), known.cross("b", "a")):
+        assert cross.covariance(at, np.array([4, 4])) == pytest.approx([expected, 0.0], abs=1e-14)
+    spread = rate * (m**2 + sd**2) + rate + 2 * expected
+    assert known["c"].variance(at) == pytest.approx([spread] * 2, rel=1e-12)
