@@ -144,7 +144,7 @@ def _words(values: tuple) -> list[Any]:
 def _place(values: np.ndarray) -> int:
     """The address of an array: of one that may be written to by its buffer, which takes a ninth of the time."""
     if values.size and values.flags.writeable:
-        return ctypes.addressof(ctypes.c_char.from_buffer(values))
+        return ctypes.addressof(ctypes.c_char.from_buffer(values))  # type: ignore[arg-type]
     return values.__array_interface__["data"][0]
 
 
