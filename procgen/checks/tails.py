@@ -159,9 +159,9 @@ def _saddle(x: float, w: NDArray, d: NDArray, s_max: float, sd: float) -> float:
         low, high = (s, high) if above < 0 else (low, s)
         step = above / float(np.dot(weights * twice, each * each))
         if abs(step) < _NEAR * s:
-            break
+            return s
         s = s - step if low < s - step < high else 0.5 * (low + high)
-    return s
+    return low  # a weight of nearly 0 lets s_max be as good as infinite, and the saddle lies far below what was tried
 
 
 def _contour(x: float, w: NDArray, d: NDArray, s0: float, s_max: float) -> float:
