@@ -13,7 +13,7 @@ from numpy.typing import ArrayLike, NDArray
 _LOG2 = math.log(2.0)
 SAFE = 1.6
 _FAR = 1e4  # standard deviations
-_NEAR = 1e-9  # of a saddle point
+_NEAR = 1e-6  # of a saddle point, in standard deviations of the tilted law there
 _RANKS = -1e4  # logarithm of a tail, below which it only ranks: Chernoff's bound is enough
 
 
@@ -145,23 +145,27 @@ def _upper(x: float, w: NDArray, d: NDArray) -> float:
 
 
 def _saddle(x: float, w: NDArray, d: NDArray, s_max: float, sd: float) -> float:
-    """s > 0 with K'(s) = x, by Newton's steps within halving bounds; any s near it gives the same integral."""
+    """s > 0 with K'(s) = x, by Newton's steps within halving bounds; any s near it gives the same integral.
+
+    They begin where a normal variable would have it: s_max is as good as infinite where all weights above 0 are tiny.
+    """
     twice, weights = 2 * w, d * w
     low, high = 0.0, s_max
     if not math.isfinite(s_max):
         high = 1.0 / sd
         while float(np.dot(weights, 1 / (1 - twice * high))) < x and high < 1e12 / sd:
             high *= 2
-    s = 0.5 * (low + high)
-    for _ in range(40):
+    s = min(0.5 * (low + high), max((x - float(np.sum(weights))) / sd**2, 0.01 / sd))
+    for _ in range(60):
         each = 1 / (1 - twice * s)
         above = float(np.dot(weights, each)) - x
         low, high = (s, high) if above < 0 else (low, s)
-        step = above / float(np.dot(weights * twice, each * each))
-        if abs(step) < _NEAR * s:
+        curvature = float(np.dot(weights * twice, each * each))
+        if abs(above) < _NEAR * math.sqrt(curvature):  # in its own unit: near a pole every step is small
             return s
+        step = above / curvature
         s = s - step if low < s - step < high else 0.5 * (low + high)
-    return low  # a weight of nearly 0 lets s_max be as good as infinite, and the saddle lies far below what was tried
+    return low
 
 
 def _contour(x: float, w: NDArray, d: NDArray, s0: float, s_max: float) -> float:

@@ -1,7 +1,7 @@
 """Tail probabilities against SciPy, closed forms, and published points."""
 
 import math
-from itertools import pairwise
+from itertools import pairwise, product
 
 import numpy as np
 import pytest
@@ -104,3 +104,15 @@ def test_pearson3_is_exact_for_gamma_sums(skew):
         upper, lower = tails.pearson3(z, skew)
         assert math.exp(upper) == pytest.approx(stats.pearson3.sf(z, skew), rel=1e-6)
         assert math.exp(lower) == pytest.approx(stats.pearson3.cdf(z, skew), rel=1e-6)
+
+
+@pytest.mark.parametrize("tiny", [1e-8, 1e-12, 1e-16, 1e-27])
+@pytest.mark.parametrize("dof", [1, 2, 30, 20_000])
+def test_a_chi_square_beside_a_weight_of_nearly_nothing_has_its_own_tails(dof, tiny):
+    """Against scipy's chi2: the second weight puts the border of the transform far away, or gives it a pole."""
+    for sign, side, z in product((1, -1), (1, -1), (-12, -3, -0.1, 0, 1, 3, 12)):
+        if (q := dof + z * math.sqrt(2 * dof)) > 0:
+            upper, lower = float(stats.chi2.logsf(q, dof)), float(stats.chi2.logcdf(q, dof))
+            found = tails.weighted_chi_squares(sign * q, [sign, side * tiny], [dof, 1])
+            expected = (upper, lower) if sign > 0 else (lower, upper)
+            assert found == pytest.approx(expected, rel=1e-6, abs=1e-6), (sign, side, z)
