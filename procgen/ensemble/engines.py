@@ -256,7 +256,11 @@ class Helper(threading.Thread):
                 self._send(task)
                 self.crew.keep(self._receive())
         except Stopped:
-            self.process.wait()  # `end` ends it: with its input closed, it would think us dead and clean up nothing
+            # `end` ends it: with its input closed, it would think us dead and clean up nothing. What it says until then
+            # is read, or it would wait for ever to say more than a pipe holds.
+            for _ in self.process.stdout or ():
+                pass
+            self.process.wait()
         except BaseException as error:
             self.crew.fail(error)
         finally:
