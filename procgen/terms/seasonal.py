@@ -82,7 +82,7 @@ class Seasonal(Known):
         # An integer period is reduced in integers, so that a far step keeps its full precision; and each step of a
         # cycle is worked out once.
         cycle, place = int(self.period), steps % int(self.period)
-        if cycle >= len(steps) or steps.size > len(steps):
+        if steps.ndim == 0 or cycle >= len(steps) or steps.size > len(steps):
             return self._waves(place)
         return self._waves(np.arange(cycle).reshape(-1, *steps.shape[1:]))[place.ravel()]
 

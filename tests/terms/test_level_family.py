@@ -115,6 +115,15 @@ def test_local_time_before_the_start_and_far_away():
     assert far[0] < 0 < far[1]
 
 
+@pytest.mark.parametrize("steps", [np.array(7), np.arange(3), np.arange(5, 40), np.array([10**12])])
+def test_a_whole_period_gives_one_step_and_many_their_cosine(steps):
+    """One step by itself, fewer than a cycle, more than one, a far one: 2 cos(2π (t − 3) / 12)."""
+    graph = graph_of("  x: {seasonal: {period: 12, harmonics: {amplitude: 2, peak: 3}}}")
+    found = graph.series["x"].term.at(steps)
+    assert found.shape == steps.shape
+    np.testing.assert_allclose(found, 2 * np.cos(2 * np.pi * (steps % 12 - 3) / 12), atol=1e-15)
+
+
 def test_annual_waves_are_as_long_as_each_year():
     """Peaks at the beginning of 20 July whatever the year; the fraction of the year by pandas."""
     series = "  x: {annual: {harmonics: [{amplitude: 8, peak: 07-20}, {amplitude: 2, peak: 01-01}]}}"
