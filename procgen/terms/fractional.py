@@ -14,6 +14,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from functools import lru_cache
+from threading import local
 from typing import ClassVar
 
 import numpy as np
@@ -228,8 +229,11 @@ def predicted(weights, past, z, out):
         out[:] = np.add.accumulate(np.concatenate([z, weights[:, None] * past[::-1]]), axis=0)[-1]
 
 
-class Predictors:
-    """Best linear predictors of fractional Gaussian noise from all t values before (Durbin 1960; Levinson 1947)."""
+class Predictors(local):
+    """Best linear predictors of fractional Gaussian noise from all t values before (Durbin 1960; Levinson 1947).
+
+    Each thread has weights of its own, as each is at a step of its own.
+    """
 
     def __init__(self, hurst):
         self.gamma = _fractional_gaussian(hurst, FractionalGaussianNoise.longest)
