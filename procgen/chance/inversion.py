@@ -13,6 +13,7 @@ import numpy as np
 from procgen.chance.areas import Areas
 from procgen.chance.blocks import Scratch
 from procgen.chance.elementary import cos_turns
+from procgen.chance.kernel import is_compiling, machine
 
 ACCURACY = 1e-10
 _DEGREE = 6
@@ -49,8 +50,11 @@ class Inverse:
         """Quantiles of tail areas p on the sides where side < 0 (lower) or not (upper); float64 vectors."""
         n = len(p)
         near, t, cell = scratch(0, n), scratch(1, n), scratch(0, n, np.int64)
-        lower = np.less(side, 0.0, out=scratch(0, n, np.bool_))
         np.minimum(np.maximum(p, _LEAST, out=near), _MOST, out=near)
+        if is_compiling():
+            self._compiled(near, side, t, cell, out)
+            return
+        lower = np.less(side, 0.0, out=scratch(0, n, np.bool_))
         bits, fraction = near.view(np.int64), t.view(np.int64)
         np.subtract(np.right_shift(bits, _SHIFT, out=cell), _FIRST, out=cell)
         np.left_shift(np.bitwise_and(bits, _FRACTION, out=fraction), _CUT_BITS, out=fraction)
@@ -68,6 +72,15 @@ class Inverse:
         if self._mirrored:
             np.add(np.maximum(out, 0.0, out=out), 0.0, out=out)  # 0, not -0
             np.negative(out, out=out, where=lower)
+
+    def _compiled(self, near: np.ndarray, side: np.ndarray, t: np.ndarray, cell: np.ndarray, out: np.ndarray) -> None:
+        """The same bits for areas that lie in the table."""
+        machine("compiled_inversion", "cells")(near.view(np.int64), side, self._below, t, cell)
+        if not self._even:
+            self._descend(cell, t)
+        machine("compiled_inversion", "polynomials")(self._pieces, cell, t, out)
+        if self._mirrored:
+            machine("compiled_inversion", "mirrored")(side, out)
 
     def _descend(self, cell: np.ndarray, t: np.ndarray) -> None:
         """Go on to the cells that cells were cut into, in place."""
