@@ -77,6 +77,7 @@ class Table:
         if not len(frame):
             raise TableError(f"{where} has no rows")
         self._checks: list[Check] = []
+        self._assumed: list[str] = []  # what is said in the first line
         self.absent = 0  # rows that are missing; they are NaN in every series
         path, labels = _codes(frame[names.path]) if names.path else (np.zeros(len(frame), np.int64), ["0"])
         self.labels: list[Any] = labels
@@ -90,9 +91,10 @@ class Table:
                 f"is the right column taken for the step? {option('step')}"
             )
         self.rows = self.paths * self.steps
-        self.short = _absent_steps(self.steps, spec.time.steps)
-        if self.short:
-            self._say("steps", self.short, "reported")
+        short = _absent_steps(self.steps, spec.time.steps)
+        if short:
+            self._assumed.insert(0, short)
+            self._say("steps", short, "reported")
         if names.path is None and len(np.unique(step)) < len(step):
             raise TableError(
                 f"{where}: steps repeat, and there is no column path; {listed('path', names.found)}; "
@@ -102,6 +104,8 @@ class Table:
         if self.paths != stated:
             more = f"{many(self.paths, 'path')}, where the spec states {stated:,}: judged on those that are there"
             self._say("paths", more, "reported")
+            fewer, other = f"{self.paths:,} of the {many(stated, 'path')} stated", many(self.paths, "path")
+            self._assumed.append(fewer if self.paths < stated else f"{other}, {stated:,} stated")
         self._place(path, step)
         self._values = {name: self._numbers(frame[column], name) for name, column in names.series.items()}
 
@@ -140,7 +144,7 @@ class Table:
             "digest": None,
             "spec_digest": self.spec.digest(),
             "where": self.where,
-            "judged_on": self.short,
+            "judged_on": "; ".join(self._assumed),
         }
 
     def gathered(self, workers: int | None, progress: Progress | None, scheduler: str | None = None) -> Gather:
@@ -200,7 +204,9 @@ class Table:
         step = numbers.astype(np.int64)
         lowest = int(step.min())
         if lowest == 1 and int(step.max()) == self.spec.time.steps:
-            self._say("step order", f"steps in {name} count from 1; taken as steps 0 to {step.max() - 1}", "reported")
+            counted = f"steps in {name} count from 1; taken as steps 0 to {step.max() - 1}"
+            self._assumed.append(counted)
+            self._say("step order", counted, "reported")
             return step - 1
         if lowest < 0:
             raise TableError(f"{self.where}: expected steps from 0 on in {name}, got {lowest}")

@@ -100,6 +100,8 @@ def _lead(verdict: Verdict) -> Iterator[str]:
     size = f"{many(about['paths'], 'path')} × {many(about['steps'], 'step')}. " if "paths" in about else ""
     if verdict.verdict != "departs":  # then there is no more in it than stands above
         yield f'<p class="facts">{escaped(verdict.title)}.</p>'
+    elif part := about.get("judged_on"):
+        yield f'<p class="facts">{escaped(part[0].upper() + part[1:])}.</p>'
     checks = f"{many(len(verdict.rows), 'check')}: {tally(verdict.counts)}"
     yield f'<p class="facts">{escaped(size)}{escaped(checks)}.</p>'
     yield from (f'<p class="facts">{escaped(line)}.</p>' for line in reported(verdict))

@@ -370,3 +370,16 @@ def test_rows_of_many_paths_are_not_taken_for_one(frame):
     table = frame.rename(columns={"path": "run", "step": "hour"})
     with pytest.raises(TableError, match="no column of paths and none of steps or times, where a path has"):
         validate(table, SPEC)
+
+
+def test_what_was_assumed_of_a_table_is_said_in_the_first_line(frame, tmp_path):
+    counted = "steps in step count from 1; taken as steps 0 to 59"
+    from_one = validate(frame.assign(step=frame["step"] + 1), SPEC)
+    assert from_one.agrees is True and from_one.to_text().splitlines()[0].endswith(f" ({counted})")
+    some = validate(frame[frame["path"] < 120].assign(step=frame["step"] + 1, y=frame["y"] + 9), SPEC)
+    both = f"{counted}; 120 of the 150 paths stated"
+    assert some.agrees is False and some.title == f"DEPARTS from what the spec states ({both})"
+    assert f">{both[0].upper()}{both[1:]}.<" in some.to_html(tmp_path / "some.html").read_text()
+    more = validate(frame, read_spec(RAW | {"paths": 100}))
+    assert more.agrees is True and more.title.endswith(" (150 paths, 100 stated)")
+    assert validate(frame, SPEC).title.endswith("spec states")
