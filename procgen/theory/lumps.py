@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 from procgen.theory.mixedlaw import MixedLaw
 from procgen.theory.unknown import Unknown
 
+ROUNDING = 1e-12  # of the largest value
 NEAR = BESIDE = 1e-6  # of the distance of two values of a lattice: what is as near to a value is it
 
 
@@ -150,13 +151,22 @@ class Bounded:
         if self.spacing:
             return ()
         ends = [end for end in (self.low, self.high) if np.isfinite(end) and float(self.chance(end)) > 0.0]
-        return tuple(sorted({*ends, *(x for x in atoms_of(self.law) if self.low < x < self.high)}))
+        return tuple(sorted({*ends, *(x for x in atoms_of(self.law) if self._inside(x))}))
+
+    @cached_property
+    def _rounding(self) -> float:
+        """What is as near to a bound is it: values with a chance of their own come out of sums and products."""
+        return ROUNDING * max((abs(x) for x in atoms_of(self.law)), default=0.0)
+
+    def _inside(self, x: Any) -> Any:
+        return (x > self.low + self._rounding) & (x < self.high - self._rounding)
 
     def chance(self, x: Any) -> NDArray:
-        x = np.asarray(x, float)
-        inside = np.where((x > self.low) & (x < self.high), chance_of(self.law, x), 0.0)
-        upper = self.law.sf(self.high) + chance_of(self.law, self.high) if np.isfinite(self.high) else 0.0
-        lower = self.law.cdf(self.low) if np.isfinite(self.low) else 0.0
+        x, off = np.asarray(x, float), self._rounding
+        inside = np.where(self._inside(x), chance_of(self.law, x), 0.0)
+        upper, lower = 0.0, self.law.cdf(self.low + off) if np.isfinite(self.low) else 0.0
+        if np.isfinite(self.high):
+            upper = self.law.sf(self.high - off) + (0.0 if off else chance_of(self.law, self.high))
         return np.where(x == self.low, lower, np.where(x == self.high, upper, inside))
 
     def cdf(self, x: Any) -> NDArray:

@@ -124,6 +124,20 @@ def test_few_values():
         assert blocks.marginal(step).cdf(X) == pytest.approx(stats.ecdf(drawn).cdf.evaluate(X), abs=1e-12)
 
 
+def test_a_bound_that_is_a_value_of_the_body():
+    """Counted from what is resampled: 3, 4, 5, 6, 2, 5, 7 in blocks, so each is as likely where all can be met."""
+    recorded = [3, 5, 4, 6, 2, 5, 7]
+    law = theory(
+        {"clip": {"of": [{"moving_blocks": {"values": recorded, "length": 3}}], "low": 3, "high": 5}}
+    ).marginal(50)
+    windows = [recorded[k + 50 % 3] for k in range(len(recorded) - 2)]
+    held = np.clip(windows, 3, 5)
+    assert [round(x) for x in law.atoms] == sorted(set(held.tolist()))
+    for value in (3.0, 4.0, 5.0):
+        at = law.atoms[[round(x) for x in law.atoms].index(value)]
+        assert float(law.chance(at)) == pytest.approx(np.mean(held == value), rel=1e-12)
+
+
 def test_jumps_or_none():
     """A Poisson number of normals, added up over the number (Merton 1976)."""
     law, k = theory({"compound_poisson": {"rate": 0.4, "mean": 1, "sd": 2}}).marginal(2), np.arange(1, 40)
