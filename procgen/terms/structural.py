@@ -233,7 +233,7 @@ class SeasonalRandomWalk(Integrated):
             "start",
             "x₀",
             Reals(),
-            "the pattern at steps 0 … s − 1 that no shock gives, its first value at step 0; 0 when absent",
+            "the pattern of the first season before its shocks, which come from step 1 on; 0 when absent",
             default=None,
             unit="series",
         ),
