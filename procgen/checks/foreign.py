@@ -14,7 +14,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
-from procgen.checks import handled, judge, ordered
+from procgen.checks import filled, handled, judge, ordered
 from procgen.checks.blocks import GROUP
 from procgen.checks.clock import ClockError, NoTime, Times, mismatch, refuse_numbers, steps_on_grid
 from procgen.checks.files import TableError, read_file
@@ -110,7 +110,7 @@ class Table:
         self._values = {name: self._numbers(frame[column], name) for name, column in names.series.items()}
 
     def checks(self) -> list[Check]:
-        return [*self._checks, *self._order_of_paths()]
+        return [*self._checks, *self._filled(), *self._order_of_paths()]
 
     def causes(self, names: Sequence[str]) -> Iterator[Check]:
         """What was done to the values of these series, where it shows."""
@@ -119,6 +119,12 @@ class Table:
                 x = self._block(self._values[plan.name], 0, self.paths)
                 if np.isfinite(x).all():
                     yield from handled.causes(plan.name, x, plan, self.spec.series[plan.name].decimals)
+
+    def _filled(self) -> Iterator[Check]:
+        """Whether one number stands in many places of a series."""
+        for what in self._plan.precision:
+            if what.repeats is not None and self.steps > 1 and self.rows <= _LOOKED_AT:
+                yield filled.check(what.name, self._block(self._values[what.name], 0, self.paths), what.repeats)
 
     def _order_of_paths(self) -> Iterator[Check]:
         """Whether paths go on where others end, or share draws; not where the spec gives each numbers of its own."""

@@ -16,7 +16,8 @@ import numpy as np
 from procgen.checks import farthest, missing, repeated
 from procgen.checks.atoms import few_shocks, may_stay
 from procgen.checks.copies import repeats_of
-from procgen.checks.extremes import Reach
+from procgen.checks.extremes import MARK, Reach
+from procgen.checks.filled import FILLED
 from procgen.checks.gather import Gather, Plan
 from procgen.checks.judge_moments import cross_moments, moment_checks
 from procgen.checks.judge_shocks import cross_checks, shock_checks
@@ -97,6 +98,8 @@ def validate(
     if absent:  # rows that are missing are named once, not again as values that are not finite
         rows = [row for row in rows if not _only_absent(row, gather, absent)]
     for row in rows:
+    marked = {row.series for row in rows if row.note.endswith(MARK)}  # told as a mark of what is missing
+    rows = [row for row in rows if not (row.what == FILLED and row.series in marked)]
         _as_known(row, origin)
     verdict = Verdict(rows, false_alarm, origin.about(), origin)
     if verdict.agrees is False and hasattr(origin, "causes"):
