@@ -55,7 +55,7 @@ def _constant(gather: Gather, column: int, i: int) -> Check:
     if n and max(off, spread) > room:
         seen = mean + float(gather.moments.mean[k])
         stated, given = side_by_side(mean, seen, 6)
-        fault = f"every path must be {stated} here; the paths' mean is {given}, their sd {spread:.3g}"
+        fault = f"every path must be {stated} at {_at(plan, i)}; the paths' mean is {given}, their sd {spread:.3g}"
     check = Check.fact(plan.name, "constant", _at(plan, i), fault, "the same known value on every path")
     check.kind, check.theory, check.estimate = "level", mean, mean + float(gather.moments.mean[k])
     return check

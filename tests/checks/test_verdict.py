@@ -203,7 +203,7 @@ def test_a_known_value_that_is_missed_says_by_how_much():
     values = draw(spec := spec_of([{"constant": 120}, {"random_walk": {"start": 0, "sd": 1}}], 150, 20, 3))
     values["x"] = values["x"] + 4e-4  # the first value of a walk is known
     (row,) = [row for row in judged(gathered(plan_of(spec), [(0, 0, values)])) if row.what == "constant"]
-    assert "must be 120 here; the paths' mean is 120.0004, their sd" in row.note
+    assert "must be 120 at step 0; the paths' mean is 120.0004, their sd" in row.note
     assert Verdict([row], 0.001).headline == [f"x: level: {row.note}"]
 
 
