@@ -94,6 +94,8 @@ def _parquet(path: Path, choose: Callable[[list[str]], N]) -> tuple[pd.DataFrame
     if last != _MARK:
         raise TableError(f"{path} is cut off: a Parquet file ends with {_MARK.decode()}; write or copy it again")
     wanted = choose(pq.read_schema(path).names)
+    if not pq.read_metadata(path).num_rows:  # then there may be pages of no bytes
+        raise TableError(f"{path} has no rows")
     return read_within(path, wanted.all, _room(path)).to_pandas(ignore_metadata=True), wanted
 
 

@@ -383,3 +383,11 @@ def test_what_was_assumed_of_a_table_is_said_in_the_first_line(frame, tmp_path):
     more = validate(frame, read_spec(RAW | {"paths": 100}))
     assert more.agrees is True and more.title.endswith(" (150 paths, 100 stated)")
     assert validate(frame, SPEC).title.endswith("spec states")
+
+
+@pytest.mark.parametrize("name", ["none.csv", "none.parquet"])
+def test_a_file_without_rows_says_so(frame, tmp_path, name):
+    path = tmp_path / name
+    (frame.iloc[:0].to_csv if name.endswith("csv") else frame.iloc[:0].to_parquet)(path, index=False)
+    with pytest.raises(TableError, match=rf"{name} has no rows$"):
+        validate(path, SPEC)
