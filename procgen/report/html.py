@@ -19,7 +19,7 @@ from procgen.report.pictures.gallery import Gallery
 from procgen.report.pictures.page_style import PAGE
 from procgen.report.pictures.safe import breakable, escaped
 from procgen.report.pictures.write import MARKS, write
-from procgen.report.text import CAUTION, reported
+from procgen.report.text import CAUTION, none_is_found, reported
 
 if TYPE_CHECKING:
     from procgen.checks.verdict import Check, Verdict
@@ -195,13 +195,14 @@ def _row(row: Check) -> str:
     if row.log_p is not None:
         width = min(4.0, -row.log_p / math.log(10) * 0.35)
         p = f'<span class="bar" style="width:{width:.2f}rem"></span>{p_text(row.log_p)}'
+    smallest = "none" if none_is_found(row) else number(row.detectable, 3)
     cells = [breakable(text) for text in (row.series, name_of(row), row.probe)]
     figures = [*side_by_side(row.theory, row.estimate), number(row.standard_error)]
     return (
         f'<tr class="{row.outcome}">'
         + "".join(f"<td>{cell}</td>" for cell in cells)
         + "".join(f'<td class="n">{figure}</td>' for figure in figures)
-        + f'<td class="p">{p}</td><td class="n">{number(row.detectable, 3)}</td>'
+        + f'<td class="p">{p}</td><td class="n">{smallest}</td>'
         + f'<td class="{row.outcome}">{row.outcome}</td><td class="note">{breakable(_words(row))}</td></tr>'
     )
 

@@ -123,6 +123,15 @@ _IN_WORDS = {
     "slope between series": "a slope of one on the other off by {} at one pair of steps",
 }
 
+_NONE = {
+    "shocks: autocorrelation": "no correlation between shocks of one path",
+    "shocks: clustering": "no correlation between the sizes of shocks of one path",
+    "shocks: neighbouring paths": "no correlation between shocks of neighbouring paths",
+    "shocks: correlation between series": "no wrong correlation between series' shocks",
+    "prediction errors: autocorrelation": "no correlation between one-step errors",
+}  # of which none is certain to be found where that would take one beyond 1
+_FACTORS = ("shocks: variance", "prediction errors: variance")
+
 
 def _detectable(rows: Sequence[Check]) -> Iterator[str]:
     """For the series, the sharpest detectable size of each sort, in words; series of the same sizes share a line."""
@@ -130,15 +139,30 @@ def _detectable(rows: Sequence[Check]) -> Iterator[str]:
     for row in rows:
         if row.what in _IN_WORDS and row.detectable is not None and math.isfinite(row.detectable):
             mine = found.setdefault(row.series, {})
-            mine[row.what] = min(mine.get(row.what, math.inf), row.detectable)
+            mine[row.what] = min(mine.get(row.what, math.inf), math.inf if none_is_found(row) else row.detectable)
     lines: dict[str, list[str]] = {}
     for series, sizes in sorted(found.items(), key=lambda item: " ~ " in item[0]):
         sharp = {what: size for what, size in sizes.items() if what.startswith(("shocks", "prediction"))}
         sizes = sharp or sizes
-        text = "; ".join(words.format(number(sizes[what], 2)) for what, words in _IN_WORDS.items() if what in sizes)
+        text = "; ".join(_found_from(what, sizes[what]) for what in _IN_WORDS if what in sizes)
         lines.setdefault(text, []).append(series)
     for text, series_of in lines.items():
         yield from _hung(f"{', '.join(series_of)}: {text}")
+
+
+def none_is_found(row: Check) -> bool:
+    """Whether a check is certain to find no departure at all: the smallest would be a correlation beyond 1."""
+    return row.what in _NONE and row.detectable is not None and row.detectable > 1.0 + abs(row.theory or 0.0)
+
+
+def _found_from(what: str, size: float) -> str:
+    """The smallest departure of a sort that is found, in words; which of them are not, where some cannot be."""
+    if math.isinf(size):
+        return f"{_NONE[what]} is certain to be found"
+    words = _IN_WORDS[what].format(number(size, 2))
+    if what in _FACTORS and size >= 1.0:  # a variance below 0 there is none
+        return f"{words.replace('±', '+')}, while no smaller one is certain to be found"
+    return words
 
 
 def _hung(text: str) -> list[str]:

@@ -116,3 +116,21 @@ def test_a_drawn_parameter_and_squares_are_told_in_words():
     lines = Verdict([law, squares], 0.001).headline
     assert "(the distribution function of parameter pull is off by up to 0.18, p 2.3e−19)" in lines[0]
     assert "slope of squares on earlier squares at lag 1 is " in lines[1]
+
+
+def test_a_departure_that_cannot_be_is_not_called_the_smallest_one_found():
+    """Of 20 shocks no correlation is certain to be found, and no variance that is too small."""
+
+    def of(what, error, theory=0.0):
+        return Check.of("x ~ y" if what.endswith("series") else "x", what, "", "memory", unit(0.1, error, theory))
+
+    few = [of("shocks: variance", 0.4, 1.0), of("shocks: autocorrelation", 0.25), of("shocks: clustering", 0.1)]
+    text = " ".join(Verdict(few, 0.001).to_text().split())
+    assert "a shock variance off by a factor of 1 + 1.9, while no smaller one is certain to be found; " in text
+    assert "; no correlation between shocks of one path is certain to be found; a correlation of 0.4" in text
+    assert verdict_page(Verdict(few, 0.001)).count('<td class="n">none</td>') == 1
+    pair = of("shocks: correlation between series", 0.3, 0.5)  # from 0.5 to −1 is 1.5, and 1.4 is found
+    assert "a correlation between series' shocks off by 1." in " ".join(Verdict([pair], 0.001).to_text().split())
+    pair = of("shocks: correlation between series", 0.4, 0.5)
+    text = " ".join(Verdict([pair], 0.001).to_text().split())
+    assert "x ~ y: no wrong correlation between series' shocks is certain to be found" in text
