@@ -46,6 +46,11 @@ _WHOLE = {
     "shocks: distribution function": "the shocks' distribution function is off by up to {}",
 }
 _PERCENT = ("shocks: spread by step", "shocks: spread by path")
+_STATISTICS = {
+    "law": "the Anderson–Darling statistic of the values at {} is {}, expected about {}",
+    "shocks: variance of sums": "sums of shocks over {} have {} times the variance of independent ones, stated {}",
+    "shocks: neighbouring paths": "shocks of path p and {} correlate by {}, stated {}",
+}  # what was compared, where the name of a check does not say it
 _SCORE = 50.0 * math.sqrt(2.0)  # a variance off by a moves the normal score of a shock's size by a/√2, its sd by a/2
 _CORRELATIONS = {
     "autocorrelation": "autocovariance in stated variances",
@@ -213,6 +218,8 @@ def _seen(top: Check) -> str:
     between = f" between {joined(top.series.split(' ~ '))}" if top.what.endswith(GAP) else ""
     between = f" of {joined(top.series.split(' ~ '))} in sd" if top.what.endswith(TOGETHER) else between
     seen, stated = side_by_side(top.estimate, top.theory, 4)
+    if name_of(top) in _STATISTICS:
+        return _STATISTICS[top.what].format(top.probe.replace("path −", "p −"), seen, stated)
     return f"{name_of(top)}{between}{where} is {seen}, stated {stated}"
 
 

@@ -7,7 +7,7 @@ import numpy as np
 import pytest
 from statsmodels.stats.multitest import multipletests
 
-from procgen.checks.judge import Sample, normal_mean, sample_mean, unit
+from procgen.checks.judge import Sample, anderson_darling, normal_mean, sample_mean, unit
 from procgen.checks.validate import gathered, judged, plan_of
 from procgen.checks.verdict import COLUMNS, Check, Verdict, holm
 from procgen.checks.words import alike, p_text, side_by_side
@@ -181,6 +181,20 @@ def test_a_correlation_is_called_so_only_where_it_can_be_one():
         assert f"({name} at lag 1 is " in verdict.headline[0]
         assert f"  {name}  lag 1" in verdict.to_text()
         assert "< 1e−300" in verdict.to_text() and "1e−2" not in verdict.to_text()
+
+
+def test_statistics_are_told_by_what_was_compared():
+    """A law has no value, and neither have sums: what was computed of them is named."""
+    uniforms = np.random.default_rng(1).random(200) ** 2
+    rows = [
+        Check.of("x", "law", "step 0", "law", anderson_darling(uniforms)),
+        of("shocks: variance of sums", 41.93, -60.0, "memory", probe="16 steps", theory=1.0),
+        of("shocks: neighbouring paths", 0.08377, -50.0, "dependence", probe="path − 1"),
+    ]
+    law, sums, paths = (Verdict([row], 0.001).headline[0] for row in rows)
+    assert f"(the Anderson–Darling statistic of the values at step 0 is {rows[0].estimate:.4g}, expected about 1" in law
+    assert "(sums of shocks over 16 steps have 41.93 times the variance of independent ones, stated 1, p" in sums
+    assert "(shocks of path p and p − 1 correlate by 0.08377, stated 0, p" in paths
 
 
 def test_p_is_rounded_to_two_digits_and_not_down_to_a_power_of_ten():
