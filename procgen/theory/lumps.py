@@ -299,7 +299,7 @@ def moments(law: Any) -> tuple[float, float]:
         scale = abs(float(law.ppf(0.9)) - float(law.ppf(0.1))) or reach
         cuts = [c for c in (0.0, scale, 8.0 * scale) if c < reach]
         once = twice = 0.0
-        for a, b in zip(cuts, [*cuts[1:], reach], strict=True):
+        for a, b in zip(cuts, [*cuts[1:], reach][: len(cuts)], strict=True):  # none where the median is the end
             once += quad(lambda d, f=beyond: float(f(d)), a, b, epsabs=0, epsrel=1e-11, limit=200)[0]
             twice += quad(lambda d, f=beyond: 2.0 * d * float(f(d)), a, b, epsabs=0, epsrel=1e-11, limit=200)[0]
         parts.append((once, twice))

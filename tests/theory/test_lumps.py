@@ -160,3 +160,11 @@ def test_a_bound_that_is_met_too_often_is_named(decimals):
     values["x"] = np.where(values["x"] <= -0.6, -1.0, values["x"])
     found = pg.validate(values, spec, false_alarm=FALSE_ALARM)
     assert "share of -1" in {row.what for row in found.rows if row.outcome == "departs"}, found.to_text()
+
+
+def test_what_is_held_at_its_bound_more_than_half_of_the_time():
+    # The median is the bound then; mean of max(X, c) of a normal X: c Phi(c/s) + s phi(c/s) (Tobin 1958).
+    held = {"hold": {"of": [{"max": {"of": [AR], "and": [{"constant": 3}]}}], "every": 4}}
+    law = theory(held).marginal(5)
+    assert law.mean() == pytest.approx(3 * stats.norm.cdf(1.5) + 2 * stats.norm.pdf(1.5), rel=1e-9)
+    assert law.cdf(3.0) == pytest.approx(stats.norm.cdf(1.5), rel=1e-12)
