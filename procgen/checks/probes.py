@@ -71,6 +71,7 @@ class SeriesPlan:
         self.drawn = self.variance  # before rounding
         self.coarse = np.zeros(len(self.steps), dtype=bool)  # probes hidden by rounding
         self.may_stay = False  # whether two paths may be equal by chance, for their values can be held
+        self.smooth = True  # whether by its terms no value lies on a grid
         self._skewness: dict[int, float] = {}
 
     def reason(self, name: str) -> str:

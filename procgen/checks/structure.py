@@ -38,6 +38,7 @@ class Precision:
     gaps: bool = False  # whether values may be missing
     repeats: copies.Repeats | None = None  # what chance may repeat of it, where that is known to be little
     possible: support.Possible = field(default_factory=support.Possible)  # what its values may be
+    smooth: bool = True  # whether by its terms no value of it lies on a grid, so that one that does tells of rounding
 
 
 @dataclass
@@ -233,11 +234,12 @@ class Structure:
                 f"declared, the first at path {path}, step {step}"
             )
         fits, whole, seen, half, *_ = self.narrow.get(what.name, _UNSEEN)
-        if what.type == "float64" and seen >= 32 and fits > _MOST * seen:
+        told = what.smooth and what.type == "float64" and seen >= 32
+        if told and fits > _MOST * seen:
             type = "float16" if half > _MOST * seen else "float32"
             mend = "" if type == "float16" else "; write `type: float32` if that is meant"
             fault = f"values went through {type} (all fit in it), where float64 is declared{mend}"
-        if what.type == "float64" and seen >= 32 and whole > _MOST * seen:
+        if told and whole > _MOST * seen:
             fault = "values are rounded to whole numbers, where no rounding (`decimals: 0`) is declared"
         decimals = self._grid(what)
         if decimals and any(row.outcome == "departs" for row in self._repeated(what, what.repeats)):
@@ -246,14 +248,14 @@ class Structure:
         if what.type == "float32" and fits < seen:
             fault = "values are finer than float32, which is declared"
         low, high = self.ends.get(what.name, (math.nan, math.nan))
-        if low == high and seen >= 32:
+        if what.smooth and low == high and seen >= 32:
             fault = f"all values are {number(low, 6)}"
         return Check.fact(what.name, "precision", "all steps", fault, f"as declared: {declared}")
 
     def _grid(self, what: Precision) -> int | None:
         """The decimals to which values are seen to be rounded though none are declared; None where they are not."""
         _, whole, seen, _, *grids = self.narrow.get(what.name, _UNSEEN)
-        if what.decimals is not None or seen < 32:
+        if what.decimals is not None or seen < 32 or not what.smooth:
             return None
         counts = {0: whole, **dict(zip(_GRIDS, grids, strict=True))}
         return next((decimals for decimals, count in counts.items() if count > _MOST * seen), None)

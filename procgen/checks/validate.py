@@ -25,6 +25,7 @@ from procgen.checks.lane import in_one_process
 from procgen.checks.probes import PAIR_LIMIT, SeriesPlan, plan_cross, plan_series
 from procgen.checks.recover import Cannot, Expected, Route, expected, route
 from procgen.checks.relations import plan_relations
+from procgen.checks.smooth import smooth
 from procgen.checks.special import lumpy
 from procgen.checks.squares import plan_squares
 from procgen.checks.structure import Precision
@@ -97,9 +98,9 @@ def validate(
     absent = getattr(origin, "absent", 0)
     if absent:  # rows that are missing are named once, not again as values that are not finite
         rows = [row for row in rows if not _only_absent(row, gather, absent)]
-    for row in rows:
     marked = {row.series for row in rows if row.note.endswith(MARK)}  # told as a mark of what is missing
     rows = [row for row in rows if not (row.what == FILLED and row.series in marked)]
+    for row in rows:
         _as_known(row, origin)
     verdict = Verdict(rows, false_alarm, origin.about(), origin)
     if verdict.agrees is False and hasattr(origin, "causes"):
@@ -159,18 +160,17 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
         blind = isinstance(way, Cannot) or way.scores is None
         plan = plan_series(name, th[name], steps, grain, _periods(graph, name), blind)
         plan.may_stay = may_stay(th[name], graph, name)
+        plan.smooth = smooth(graph, name, steps)
         series.append(plan)
         routes[name] = way
         random = th[name].random
         reach = Reach(th[name], grain, steps, spec.paths * steps) if random else None
         possible = possible_of(graph, name, declared, vanishes(th[name], steps)) if random else Possible()
-        kind = column_type(graph, name)
+        kind, few = column_type(graph, name), lumpy(th[name])
         precision.append(
-            Precision(name, kind, declared.decimals, random, lumpy(th[name]), reach, possible=possible)
+            Precision(name, kind, declared.decimals, random, few, reach, possible=possible, smooth=plan.smooth)
         )
-        precision[-1].repeats = (
-            repeats_of(plan, way, graph, lumpy(th[name]), spec.paths * steps) if random else None
-        )
+        precision[-1].repeats = repeats_of(plan, way, graph, few, spec.paths * steps) if random else None
     ways = [way for way in routes.values() if isinstance(way, Route) and way.scores is not None]
     pairs = {(a.series, b.series): expected(a, b, th.axis.space) for a, b in list(combinations(ways, 2))[:PAIR_LIMIT]}
     unseen = [name for name, way in routes.items() if isinstance(way, Cannot) or way.scores is None]
