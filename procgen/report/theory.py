@@ -119,7 +119,7 @@ def _memory(theory: SeriesTheory, facts: dict[str, Any]) -> list[str]:
     if start == 0 and _remembers(facts):
         found += [("partial", theory.partial_autocorrelation(lags), NOTHING)]
     if start == 0 and not facts["gaussian"]:
-        found += [("of squares", theory.autocorrelation_of_squares(lags))]
+        found += [("of squared deviations", theory.autocorrelation_of_squares(lags))]
     rows = [(name, None if v is None else _without_dust(v, *size)) for name, v, *size in found]
     return _table("lag" if start == 0 else f"lag, from step {start}", lags, rows)
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import math
 
 import numpy as np
 import pytest
@@ -68,10 +69,30 @@ def test_memory_forecasts_and_means_are_printed_where_there_is_memory():
     assert "steps ahead" in walk and "steps averaged" not in walk and "┴" not in walk
 
 
+def test_the_squares_of_a_series_with_a_mean_are_those_of_its_deviations():
+    """E exp(aX + bY) of two normals (Aitchison & Brown 1957, ch. 2): (x − m)² for x = exp X is told, and not x²."""
+
+    def moment(a, b, rho):
+        return math.exp(0.25 * (a * a + b * b + 2 * rho * a * b) / 2)
+
+    def correlation(weights, rho):
+        def product(r):
+            return sum(p * q * moment(a, b, r) for a, p in weights.items() for b, q in weights.items())
+
+        size = sum(p * moment(a, 0, 0.0) for a, p in weights.items())
+        return (product(rho) - size**2) / (product(1.0) - size**2)
+
+    mean = moment(1, 0, 0.0)
+    lines = text_of({"exp": [{"ar": {"phi": 0.8, "sd": 0.3}}]}).splitlines()
+    (row,) = [line for line in lines if "of squared deviations" in line]
+    assert f" {correlation({2: 1.0, 1: -2 * mean, 0: mean**2}, 0.8):.5g}" in row
+    assert f" {correlation({2: 1.0}, 0.8):.5g}" not in row
+
+
 def test_several_parts_heavy_tails_and_what_is_not_known():
     two = text_of({"ar": {"phi": 0.8, "sd": 3}}, {"white_noise": {"sd": 2, "law": {"student_t": {"df": 5}}}})
     assert "error variance 14.8714 " in " ".join(two.split()) and "seeing all parts 13 " in " ".join(two.split())
-    assert "of squares" in two and "moments below order 5 exist" in two
+    assert "of squared deviations" in two and "moments below order 5 exist" in two
     price = text_of({"exp": [{"ar": {"phi": 0.8, "sd": 0.3}}]})
     assert "error variance, linear" in price and "seeing all parts" not in price
     bursts = text_of({"fractional_gaussian_noise": {"hurst": 0.8, "sd": 1}}, {"white_noise": {"sd": 1}})

@@ -118,7 +118,7 @@ def squares(subject: Subject) -> Chart | None:
     compared = Comparison(lags, truth, found.value, reason=reason, whose=f"{subject.whose()}, all steps")
     if subject.paths >= ENOUGH:
         compared.around(*stated.chance(lags, found.error, subject.paths))
-    return compared.chart("Autocorrelation of squares")
+    return compared.chart("Autocorrelation of squared deviations")
 
 
 def _lags(subject: Subject) -> NDArray:
