@@ -68,7 +68,8 @@ def test_what_a_page_holds_and_in_which_order():
     order += ['id="spec"', 'id="record"', "<footer>"]
     assert [text.index(mark) for mark in order] == sorted(text.index(mark) for mark in order)
     said = " ".join(page.text)
-    for words in ("x[t] = 0.5 x[t−1] + a[t]", "Autocorrelation of squared deviations", "Parts of one path", "all 120 paths"):
+    squares = "Autocorrelation of squared deviations"
+    for words in ("x[t] = 0.5 x[t−1] + a[t]", squares, "Parts of one path", "all 120 paths"):
         assert words in said
     assert "garch: {omega: 0.1, alpha: 0.1, beta: 0.8}" in said
     assert "@media print" in text and "prefers-color-scheme: dark" in text and 'name="viewport"' in text
