@@ -99,7 +99,7 @@ def _rounded(x: NDArray, plan: Any, declared: int | None) -> str:
     """Values on a grid of decimals that is not declared, or coarser than that."""
     from procgen.checks.special import lumpy
 
-    if lumpy(plan.theory) or (declared is None and not plan.smooth):
+    if lumpy(plan.theory) or not plan.smooth:
         return ""
     small = np.abs(x) < _WHOLE
     for decimals in _GRIDS if declared is None else range(max(min(declared, len(_GRIDS)), 0)):
