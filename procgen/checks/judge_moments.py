@@ -47,7 +47,8 @@ def _constant(gather: Gather, column: int, i: int) -> Check:
     plan = gather.plan.series[column]
     k = gather.plan.offset[column] + i
     mean = float(plan.mean[i])
-    room = plan.grain / 2 + 1e-9 * max(1.0, abs(mean), float(np.abs(plan.mean).max()))
+    widest = math.sqrt(float(np.max(plan.drawn, where=np.isfinite(plan.drawn), initial=0.0)))
+    room = plan.grain / 2 + 1e-9 * max(1.0, abs(mean), float(np.abs(plan.mean).max()), widest)
     n = gather.moments.n
     spread = math.sqrt(max(float(gather.moments.scatter[k, k]), 0.0) / max(n, 1))
     off = abs(float(gather.moments.mean[k]))

@@ -22,6 +22,7 @@ from procgen.theory.mixedlaw import Normal
 
 PAIR_LIMIT = 36  # pairs of series that are compared
 _HUGE = 1e9  # times the size of a series
+NOTHING = 1e-24  # of the largest variance of a series: a step with less is certain
 _NEVER = 1e-9  # chance of what may be left out
 _RARE = 9.0  # the kurtosis, that of the exponential law, beyond which a few rare values make most of the spread
 
@@ -177,7 +178,7 @@ def plan_series(
         at,
         theory,
         blank if mean is None else mean,
-        blank if variance is None else variance,
+        blank if variance is None else settled(variance),
         grain,
         "; ".join(dict.fromkeys(unknown)),
         probe_pairs(at.tolist()),
@@ -198,6 +199,12 @@ def plan_series(
     else:
         _laws_alone(plan)
     return plan
+
+
+def settled(variance: NDArray) -> NDArray:
+    """Variances with 0 for what is nothing beside the largest: rounding leaves it where values are certain."""
+    largest = float(np.max(variance, where=np.isfinite(variance), initial=0.0))
+    return np.where(variance < NOTHING * largest, 0.0, variance)
 
 
 def _rounded(plan: SeriesPlan) -> NDArray[np.bool_]:

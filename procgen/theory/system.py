@@ -24,6 +24,8 @@ LARGEST_STATE = 1500
 MANY = 128  # from so many distinct gaps on, a table of responses is cheaper than powers
 OVERHEAD = 20_000  # of a few small array operations, in multiplications
 LONGEST_RESPONSE = 50_000_000  # numbers in a table of responses
+LONGEST_STILL = 64  # steps from 0 on that are looked at for values that are certain
+CANCELS = 1e-14  # of the sizes of what is added up: what is left of it is rounding
 LONGEST_MARCH = 500_000  # steps taken one by one while the variance of a source changes
 
 Distinct = tuple[np.ndarray, np.ndarray]
@@ -45,6 +47,7 @@ class System:
     noise_path: Callable[[np.ndarray], np.ndarray] | None = None
     settles: float = 0.0
     _table: list[tuple[np.ndarray, np.ndarray]] = field(default_factory=list, repr=False)
+    _still: dict[int, np.ndarray] = field(default_factory=dict, repr=False)
 
     def covariance(self, i: int, j: int, t: np.ndarray, s: np.ndarray) -> np.ndarray:
         """Cov(y_i(t), y_j(s)) for one-dimensional int64 arrays of steps >= 0."""
@@ -54,7 +57,27 @@ class System:
             chosen = (t >= s) if ahead else (t < s)
             if chosen.any():
                 out[chosen] = self._ordered(row, other, early[chosen], (late - early)[chosen])
+        out[np.isin(t, self.still(i)) | np.isin(s, self.still(j))] = 0.0
         return out
+
+    def still(self, i: int) -> np.ndarray:
+        """The steps at which y_i is certain: what it has of the shocks, and of what is random at step 0, cancels.
+
+        That is so where nothing is left but rounding of the sizes of what is added up. From the first shock on that
+        does not cancel, nothing is certain.
+        """
+        if i not in self._still:
+            found, row, sizes = [], self.observation[i], np.abs(self.observation[i])
+            step, shocks = np.abs(self.transition), np.abs(self.loading)
+            for t in range(LONGEST_STILL):
+                rounding = CANCELS * float(sizes @ np.abs(self.initial) @ sizes)
+                if row @ self.initial @ row <= rounding < np.inf:
+                    found.append(t)
+                if (np.abs(row @ self.loading) > CANCELS * (sizes @ shocks)).any():
+                    break
+                row, sizes = row @ self.transition, sizes @ step
+            self._still[i] = np.array(found, dtype=np.int64)
+        return self._still[i]
 
     def carried(self, i: int, state: np.ndarray, gaps: np.ndarray) -> np.ndarray:
         """y_i as many steps after a state as `gaps` (int64, any shape) say, when there are no shocks."""
