@@ -150,6 +150,7 @@ class Table:
             "digest": None,
             "spec_digest": self.spec.digest(),
             "where": self.where,
+            "spec_file": self.spec.file,
             "judged_on": "; ".join(self._assumed),
         }
 

@@ -91,6 +91,7 @@ class EnsembleOrigin:
     def __init__(self, ensemble: Any, spec: Any = None):
         self.ensemble = ensemble
         self.spec = ensemble.spec if spec is None else spec
+        self.spec_file = self.spec.file
         self.same_draws = same_draws(ensemble.spec, self.spec)
         self.steps, self.rows = ensemble.whole.steps, ensemble.whole.rows
         self.faults: list[Check] = []
@@ -114,6 +115,8 @@ class EnsembleOrigin:
             "steps": whole.steps,
             "digest": manifest.digest if manifest is not None else None,
             "spec_digest": self.spec.digest(),
+            "where": str(self.ensemble.path) if manifest is not None else None,
+            "spec_file": self.spec_file,
         }
 
     def gathered(self, workers: int | None, progress: Progress | None, scheduler: str | None = None) -> Gather:

@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterator, Sequence
+from datetime import date
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -54,16 +55,16 @@ _CAUTIONS = (
 
 
 def write_verdict(verdict: Verdict, path: Path, overwrite: bool = False) -> Path:
-    """Write the page of a verdict; the folder must exist. Returns the path."""
-    return write(path, verdict_page(verdict), overwrite)
+    """Write the page of a verdict, with the day; the folder must exist. Returns the path."""
+    return write(path, verdict_page(verdict, date.today()), overwrite)
 
 
-def verdict_page(verdict: Verdict) -> str:
-    """The page of a verdict, with pictures where it knows its data."""
-    return whole_page(galleries.of_verdict(verdict), verdict)
+def verdict_page(verdict: Verdict, day: date | None = None) -> str:
+    """The page of a verdict, with pictures where it knows its data; `day` is that of the judgement."""
+    return whole_page(galleries.of_verdict(verdict), verdict, day)
 
 
-def whole_page(gallery: Gallery | None, verdict: Verdict | None = None) -> str:
+def whole_page(gallery: Gallery | None, verdict: Verdict | None = None, day: date | None = None) -> str:
     """A page of pictures, of a verdict, or of both."""
     about = verdict.about if verdict is not None else {}
     title = escaped(about.get("title") or (gallery.title if gallery else "") or "Verdict")
@@ -76,7 +77,7 @@ def whole_page(gallery: Gallery | None, verdict: Verdict | None = None) -> str:
         f"<title>{title}{judged}</title>",
         f"<style>{PAGE}</style></head><body>",
         f"<header><h1>{title}</h1>",
-        *(_lead(verdict) if verdict is not None else _unjudged()),
+        *(_lead(verdict, day) if verdict is not None else _unjudged()),
         *(_seen(gallery) if gallery is not None else ()),
         "</header><main>",
     ]
@@ -94,9 +95,11 @@ def whole_page(gallery: Gallery | None, verdict: Verdict | None = None) -> str:
     return "\n".join([*parts, f"</main><footer>{cautions}</footer></body></html>", ""])
 
 
-def _lead(verdict: Verdict) -> Iterator[str]:
+def _lead(verdict: Verdict, day: date | None) -> Iterator[str]:
     about = verdict.about
     yield f'<p class="verdict {verdict.verdict}">{_TITLES[verdict.verdict]}</p>'
+    if judged := _judged(verdict, day):
+        yield f'<p class="facts">{breakable(judged)}.</p>'
     size = f"{many(about['paths'], 'path')} × {many(about['steps'], 'step')}. " if "paths" in about else ""
     if verdict.verdict != "departs":  # then there is no more in it than stands above
         yield f'<p class="facts">{escaped(verdict.title)}.</p>'
@@ -109,6 +112,14 @@ def _lead(verdict: Verdict) -> Iterator[str]:
         '<p class="facts">Data of exactly the stated behaviour are called departing at most '
         f"{number(verdict.false_alarm)} of the time, over all checks together (Holm).</p>"
     )
+
+
+def _judged(verdict: Verdict, day: date | None) -> str:
+    """What was held against which spec, and when, as far as that is known: it tells two pages apart."""
+    data, spec = verdict.about.get("where"), verdict.about.get("spec_file")
+    what = " ".join(filter(None, [data, f"against {spec}" if spec else ""]))
+    when = f" on {day.isoformat()}" if day is not None else ""
+    return f"Judged{when}{': ' if what else ''}{what}" if what or when else ""
 
 
 def _unjudged() -> Iterator[str]:

@@ -7,6 +7,7 @@ import struct
 import subprocess
 import sys
 import zlib
+from datetime import date
 from pathlib import Path
 
 import pytest
@@ -14,6 +15,7 @@ from typer.testing import CliRunner
 
 import procgen as pg
 from procgen.cli import app
+from procgen.report.html import verdict_page
 from procgen.report.pictures.write import PictureError, is_ours, place_for
 from tests.report.pages import drawing, self_contained
 
@@ -195,3 +197,23 @@ def test_whoever_reads_the_first_line_only_has_the_report_all_the_same(out, tmp_
         assert process.stdout is not None
         process.stdout.close()
     assert page.read_text(encoding="utf-8").rstrip().endswith("</html>")
+
+
+def test_a_report_names_the_data_the_spec_and_the_day(out, tmp_path):
+    """Without these two pages in a mailbox cannot be told apart."""
+    table, page, first = tmp_path / "mine.csv", tmp_path / "named.html", date.today()
+    pg.open_ensemble(out).to_pandas().to_csv(table, index=False)
+    asked = {f"{out}": (out,), f"{out} against {PUMP}": (out, "--spec", PUMP)}
+    asked |= {f"{table} against {PUMP}": (table, "--spec", PUMP)}
+    for what, arguments in asked.items():
+        shown = Result("validate", *arguments, "--report", page, "--overwrite")
+        assert shown.out.endswith(f"report: {page}\n"), shown.err
+        head = page.read_text(encoding="utf-8").partition("</header>")[0].replace("<wbr>", "")
+        assert any(f">Judged on {day}: {what}.</p>" in head for day in (first, date.today())), head
+
+
+def test_a_page_of_the_same_data_is_the_same_on_another_day(out):
+    verdict = pg.validate(out)
+    assert verdict_page(verdict) == verdict_page(verdict) and "Judged on" not in verdict_page(verdict)
+    named = verdict_page(verdict, date(2027, 1, 4))
+    assert named.replace("Judged on 2027-01-04:", "Judged:") == verdict_page(verdict)
