@@ -11,7 +11,8 @@ from numpy.typing import NDArray
 from procgen.spec.draws import LognormalDraw, NormalDraw
 from procgen.theory.horizon import Forecast
 from procgen.theory.memory import _durbin_levinson, searched_half_life
-from procgen.theory.mixedlaw import MixedLaw, MixedNormals, Normal
+from procgen.theory.mixedlaw import MixedNormals, Normal
+from procgen.theory.mixedlumps import mixed_law
 from procgen.theory.series import OVERFLOW, SeriesTheory, _counted, _steps
 from procgen.theory.unknown import Unknown
 from procgen.theory.varied import Mixture, Node, sum_of
@@ -190,7 +191,7 @@ class MixedSeries(SeriesTheory):
         laws, weights = self._laws(nodes, step), [node.weight for node in nodes]
         if all(isinstance(law, Normal) for law in laws):
             return MixedNormals(weights, [law.mean for law in laws], [law.sd for law in laws])
-        return MixedLaw(weights, laws)
+        return mixed_law(weights, laws, lambda: self._laws(self._few, step), float(spread[0]), AREA)
 
     def _laws(self, nodes: list[Node], step: int) -> list[Any]:
         gaussian = [node.theory[self.name].gaussian for node in nodes]
