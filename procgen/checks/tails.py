@@ -14,6 +14,7 @@ _LOG2 = math.log(2.0)
 SAFE = 1.6
 _FAR = 1e4  # standard deviations
 _NEAR = 1e-6  # of a saddle point, in standard deviations of the tilted law there
+_INSIDE = 1 - 1e-12  # of the way to the pole: as far as any number that is compared needs
 _RANKS = -1e4  # logarithm of a tail, below which it only ranks: Chernoff's bound is enough
 
 
@@ -150,7 +151,7 @@ def _saddle(x: float, w: NDArray, d: NDArray, s_max: float, sd: float) -> float:
     They begin where a normal variable would have it: s_max is as good as infinite where all weights above 0 are tiny.
     """
     twice, weights = 2 * w, d * w
-    low, high = 0.0, s_max
+    low, high = 0.0, s_max * _INSIDE
     if not math.isfinite(s_max):
         high = 1.0 / sd
         while float(np.dot(weights, 1 / (1 - twice * high))) < x and high < 1e12 / sd:

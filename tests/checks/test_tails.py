@@ -116,3 +116,10 @@ def test_a_chi_square_beside_a_weight_of_nearly_nothing_has_its_own_tails(dof, t
             found = tails.weighted_chi_squares(sign * q, [sign, side * tiny], [dof, 1])
             expected = (upper, lower) if sign > 0 else (lower, upper)
             assert found == pytest.approx(expected, rel=1e-6, abs=1e-6), (sign, side, z)
+
+
+@pytest.mark.parametrize("size", [1e3, 1e9, 1e150, 1e300])
+def test_any_size_has_a_tail_that_ranks(size):
+    """Farther out than the saddle can be told from the pole, tails still fall, and nothing divides by 0."""
+    near, far = (tails.weighted_chi_squares(x, [1.0, 0.5, -0.2], 60)[0] for x in (size / 2, size))
+    assert far < near < -100
