@@ -9,17 +9,6 @@ from __future__ import annotations
 
 from typing import Any
 
-# Filters of their shocks and of their bodies: sums of such that read the same shocks twice leave no value repeated.
-_FILTERS = frozenset({
-    "", "aggregate", "ar", "arch", "arfima", "arima", "arma", "difference", "distributed_lag", "egarch", "exp",
-    "fractional_gaussian_noise", "garch", "geometric_brownian_motion", "gjr_garch", "integrate", "lag", "local_level",
-    "local_linear_trend", "ma", "merton", "ornstein_uhlenbeck", "random_walk", "rolling_mean", "seasonal_random_walk",
-    "stochastic_cycle", "stochastic_volatility", "subsample", "sum", "switching_garch", "switching_noise", "use",
-    "vector_arma", "vector_error_correction", "white_noise",
-})  # fmt: skip
-# What lies on no grid where no part of it does; in a sum with what reads the same shocks they may cancel.
-_BENDS = frozenset({"abs", "hold", "logit", "power", "product", "regimes", "schedule"})
-
 
 def smooth(graph: Any, name: str, steps: int) -> bool:
     """Whether no value of a series has a chance of its own, and none lies on a grid, by its terms; for `steps` steps.
@@ -36,11 +25,16 @@ def _kind(node: Any) -> str | None:
     return node.term.kind if hasattr(node, "term") else None
 
 
+def _way(node: Any) -> str:
+    """How the term of a node keeps its values off every grid; what a graph puts between terms is a filter."""
+    return node.term.smooth if node.term.kind else "filter"
+
+
 def _off_grids(graph: Any, node: Any) -> bool:
     kind = _kind(node)
     if kind is None:
         return node.law.points is None
-    if kind not in _FILTERS | _BENDS or not _sources(graph, node):
+    if not _way(node) or not _sources(graph, node):
         return False
     if hasattr(node.term, "output"):  # a hidden one, such as the number of jumps
         return False
@@ -82,7 +76,7 @@ def _apart(graph: Any, nodes: list[Any]) -> bool:
 
 def _filtered(graph: Any, node: Any) -> bool:
     """Whether all that chance moves in a node is made by filters."""
-    return all(_kind(part) in _FILTERS for part in graph.order([node]) if _kind(part) and _sources(graph, part))
+    return all(_way(part) == "filter" for part in graph.order([node]) if _kind(part) and _sources(graph, part))
 
 
 def _meets_zero(node: Any) -> bool:

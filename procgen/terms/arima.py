@@ -157,6 +157,7 @@ class Integrated(Term):
 
 class Arima(Integrated):
     kind = "arima"
+    smooth = "filter"
     family = "linear"
     purpose = "a filter of shocks, integrated: its differences are an arma, with a seasonal part if there is one"
     source = "Box & Jenkins (1970), ch. 4 and 9; regression signs"

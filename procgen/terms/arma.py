@@ -74,6 +74,7 @@ def inversion(phi, theta, x, a):
 
 class Arma(Term):
     kind = "arma"
+    smooth = "filter"
     family = "linear"
     purpose = "a filter of shocks with autoregressive and moving-average coefficients"
     source = "Box & Jenkins (1970), ch. 3; regression signs"
@@ -275,6 +276,7 @@ class Arma(Term):
 
 class Ar(Arma):
     kind = "ar"
+    smooth = "filter"
     purpose = "an autoregression: each value is a mix of the last ones and a new shock"
     example = "ar: {phi: 0.8, sd: 2}"
     parameters = tuple(p for p in Arma.parameters if p.name != "theta")
@@ -282,6 +284,7 @@ class Ar(Arma):
 
 class Ma(Arma):
     kind = "ma"
+    smooth = "filter"
     purpose = "a moving average of the last shocks"
     example = "ma: {theta: [0.4, 0.2], sd: 2}"
     parameters = tuple(p for p in Arma.parameters if p.name != "phi")

@@ -105,6 +105,9 @@ class Term:
     finer: ClassVar[str] = ""  # the parameter that says in how many parts its body cuts a step; empty where none does
     compiles: bool = False  # whether many paths side by side are drawn quicker where kernels are compiled
     burns_in: ClassVar[bool] = False  # whether `begin` reads its inputs from the first row on, a few rows at a time
+    # "filter": where its shocks or its body lie on no grid, neither do its values, nor sums of such filters of the same
+    # shocks; "bend": its values do not, yet in a sum with others of the same shocks they may cancel; empty: unknown
+    smooth: ClassVar[str] = ""
     blurs: ClassVar[bool] = False  # whether `invert` gives back values of a lattice only up to rounding
     gaps: ClassVar[bool] = False  # whether some of its values are missing; nothing but a factor may follow then
     portable: ClassVar[bool] = True

@@ -40,6 +40,7 @@ class Finer(Term):
 
 class Aggregate(Finer):
     kind = "aggregate"
+    smooth = "filter"
     purpose = "the sum, mean or last value of a body that runs on finer steps: daily totals of an hourly process"
     source = "Silvestrini & Veredas (2008)"
     example = "aggregate: {of: [{ar: {phi: 0.9, sd: 1}}], over: 4, by: sum}"
@@ -96,6 +97,7 @@ class Aggregate(Finer):
 
 class Subsample(Finer):
     kind = "subsample"
+    smooth = "filter"
     purpose = "a body that runs on finer steps, seen at the first of every so many"
     source = "Brewer (1973) for what an ARMA becomes"
     example = "subsample: {of: [{ar: {phi: 0.9, sd: 1}}], over: 12}"

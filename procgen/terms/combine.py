@@ -14,6 +14,7 @@ OF = Parameter("of", "", Body(), "what it is applied to; a list is a sum")
 
 class Sum(Term):
     kind = "sum"
+    smooth = "filter"
     family = "combination"
     purpose = "its parts added up; a list is a sum by itself"
     source = "common practice, no source"
@@ -90,6 +91,7 @@ class Scaled(Term):
 
 class Product(Term):
     kind = "product"
+    smooth = "bend"
     family = "combination"
     purpose = "its parts multiplied"
     source = "Goodman (1960) for independent parts"
@@ -131,6 +133,7 @@ class Product(Term):
 
 class Exp(Term):
     kind = "exp"
+    smooth = "filter"
     family = "combination"
     purpose = "the exponential of its body: a level that cannot fall below 0"
     source = "Aitchison & Brown (1957) for the lognormal moments"
@@ -167,6 +170,7 @@ class Exp(Term):
 
 class Use(Term):
     kind = "use"
+    smooth = "filter"
     family = "combination"
     purpose = "what is named elsewhere: a shared body, another series, one of its terms, or a hidden output"
     source = "common practice, no source"

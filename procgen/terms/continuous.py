@@ -68,6 +68,7 @@ class OrnsteinUhlenbeck(Integrated):
     """
 
     kind = "ornstein_uhlenbeck"
+    smooth = "filter"
     family = "linear"
     purpose = "a level that is pulled back to its mean in continuous time, exact at any length of step"
     source = "Uhlenbeck & Ornstein (1930); Vasicek (1977); on uneven steps Gillespie (1996)"

@@ -32,6 +32,7 @@ def turning(c, s, x, y, cycle, star, k, m):
 
 class StochasticCycle(Disturbed):
     kind = "stochastic_cycle"
+    smooth = "filter"
     family = "linear"
     purpose = "a damped cycle whose phase and height drift; its other coordinate is the hidden output `star`"
     source = "Harvey (1989), sec. 2.3.3"

@@ -22,6 +22,7 @@ ROUNDING = 1e-9  # sums of many steps may pass a bound by their rounding
 
 class DistributedLag(Term):
     kind = "distributed_lag"
+    smooth = "filter"
     family = "combination"
     purpose = "its body through a filter: each value is a mix of the last ones and what the body adds"
     source = "Koyck (1954), the geometric lag; Box & Jenkins (1970), ch. 10"

@@ -39,6 +39,7 @@ SCALE = Parameter(
 
 class Egarch(Conditional):
     kind = "egarch"
+    smooth = "filter"
     purpose = "white shocks whose log variance follows the size and sign of the shock before"
     source = "Nelson (1991)"
     example = "egarch: {scale: 1, alpha: 0.2, gamma: -0.1, beta: 0.9}"

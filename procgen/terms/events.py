@@ -63,6 +63,7 @@ class Event(Known):
 
 class Schedule(Term):
     kind = "schedule"
+    smooth = "bend"
     family = "combination"
     purpose = "one body until a date, then another; with `fade`, the first gives way to the second bit by bit"
     source = "common practice, no source"

@@ -137,6 +137,7 @@ def _variance(d, phi, theta):
 
 class Arfima(Term):
     kind = "arfima"
+    smooth = "filter"
     family = "linear"
     purpose = "a long memory: an ARMA filter of fractionally summed shocks, whose autocorrelations fall like k^(2d − 1)"
     source = "Granger & Joyeux (1980); Hosking (1981)"
@@ -286,6 +287,7 @@ def _fractional_gaussian(hurst, longest):
 
 class FractionalGaussianNoise(Term):
     kind = "fractional_gaussian_noise"
+    smooth = "filter"
     family = "linear"
     purpose = "the increments of fractional Brownian motion: a long memory that looks alike at every scale"
     source = "Mandelbrot & Van Ness (1968); drawn by the recursion of Durbin (1960) and Levinson (1947)"

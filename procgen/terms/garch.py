@@ -68,6 +68,7 @@ BEFORE = Parameter(
 
 class Garch(Conditional):
     kind = "garch"
+    smooth = "filter"
     purpose = "white shocks whose variance follows the squared shocks before them"
     source = "Bollerslev (1986); arch is its case without beta (Engle 1982); stationarity: Nelson (1990)"
     example = "garch: {sd: 6.3, alpha: 0.1, beta: 0.85}"
@@ -222,6 +223,7 @@ class Garch(Conditional):
 
 class Arch(Garch):
     kind = "arch"
+    smooth = "filter"
     purpose = "white shocks whose variance follows the last squared shocks alone"
     source = "Engle (1982)"
     example = "arch: {omega: 0.7, alpha: 0.3}"

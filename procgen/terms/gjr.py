@@ -45,6 +45,7 @@ def variance(e, omega, alpha, gamma, beta, variances, h):
 
 class GjrGarch(Conditional):
     kind = "gjr_garch"
+    smooth = "filter"
     purpose = "white shocks whose variance follows the square before, more so after a negative shock"
     source = "Glosten, Jagannathan & Runkle (1993); moments: He & Teräsvirta (1999)"
     example = "gjr_garch: {sd: 1.1, alpha: 0.03, gamma: 0.08, beta: 0.87}"

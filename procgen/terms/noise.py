@@ -11,6 +11,7 @@ from procgen.terms.start import Member
 
 class WhiteNoise(Term):
     kind = "white_noise"
+    smooth = "filter"
     family = "noise"
     purpose = "independent shocks with mean 0 and one variance"
     source = "Box & Jenkins (1970), ch. 3"

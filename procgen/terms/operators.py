@@ -14,6 +14,7 @@ OF = Parameter("of", "", Body(), "what it is applied to; a list is a sum")
 
 class Lag(Term):
     kind = "lag"
+    smooth = "filter"
     family = "combination"
     purpose = "its body as it was some steps earlier; before step 0 it reads the body's own past"
     source = "common practice, no source"
@@ -56,6 +57,7 @@ class Lag(Term):
 
 class Difference(Term):
     kind = "difference"
+    smooth = "filter"
     family = "combination"
     purpose = "the change of its body over some steps; before step 0 it reads the body's own past"
     source = "Box & Jenkins (1970), ch. 4"
@@ -104,6 +106,7 @@ class Difference(Term):
 
 class Integrate(Term):
     kind = "integrate"
+    smooth = "filter"
     family = "combination"
     purpose = "the running sum of its body: y[0] is `start`, y[t] = y[t−1] + x[t]"
     source = "Box & Jenkins (1970), ch. 4"

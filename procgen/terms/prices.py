@@ -30,6 +30,7 @@ NO_PAST = "its jumps begin after step 0; lag less"
 
 class Brownian(Term):
     kind = "geometric_brownian_motion"
+    smooth = "filter"
     family = "jumps and prices"
     purpose = "a price whose logarithm is a random walk, and whose mean grows at a rate that is stated"
     source = "Samuelson (1965); Black & Scholes (1973)"
@@ -101,6 +102,7 @@ def jumping(z, jumps, size, drift, sd, mean, spread, x, out):
 
 class Merton(Term):
     kind = "merton"
+    smooth = "filter"
     family = "jumps and prices"
     purpose = "a price that moves by many small shocks and now and then by a jump"
     source = "Merton (1976)"

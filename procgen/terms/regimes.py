@@ -26,6 +26,7 @@ def shown_in(states, number, rows, others, out):
 
 class Regimes(Term):
     kind = "regimes"
+    smooth = "bend"
     family = "regimes"
     purpose = "several bodies that run side by side, of which a Markov chain shows one at a time"
     source = "Hamilton (1989); moments: Timmermann (2000)"

@@ -110,6 +110,7 @@ class Clip(Elementwise):
 
 class Abs(Elementwise):
     kind = "abs"
+    smooth = "bend"
     purpose = "the size of its body, without its sign"
     source = "Leone, Nelson & Nottingham (1961) for the folded normal law; Price (1958) for the covariance"
     example = "abs: [{ar: {phi: 0.7, sd: 1}}, {constant: 0.5}]"
@@ -133,6 +134,7 @@ class Abs(Elementwise):
 
 class Power(Elementwise):
     kind = "power"
+    smooth = "bend"
     purpose = "its body to a whole power"
     source = "Isserlis (1918) for the moments"
     example = "power: {of: [{ar: {phi: 0.6, sd: 1}}, {constant: 2}], exponent: 2}"
@@ -194,6 +196,7 @@ class Sigmoid(Elementwise):
 
 class Logit(Elementwise):
     kind = "logit"
+    smooth = "bend"
     purpose = "the log odds of its body between two levels: what undoes a sigmoid"
     source = "Berkson (1944)"
     example = "logit: [{sigmoid: [{ar: {phi: 0.9, total_sd: 1}}]}]"

@@ -20,6 +20,7 @@ NORMAL = Normal()
 
 class StochasticVolatility(Term):
     kind = "stochastic_volatility"
+    smooth = "filter"
     family = "volatility"
     purpose = "white shocks whose log variance is an autoregression with shocks of its own"
     source = "Taylor (1986); leverage in the timing of Harvey & Shephard (1996)"

@@ -95,6 +95,7 @@ class Disturbed(Term):
 
 class LocalLevel(Disturbed):
     kind = "local_level"
+    smooth = "filter"
     family = "linear"
     purpose = "a level that walks, seen through noise; the level is a hidden output"
     source = "Harvey (1989), sec. 2.3.1 and 4.1; Durbin & Koopman (2012), ch. 2"
@@ -150,6 +151,7 @@ class LocalLevel(Disturbed):
 
 class LocalLinearTrend(LocalLevel):
     kind = "local_linear_trend"
+    smooth = "filter"
     purpose = "a level that walks with a slope that walks too, seen through noise; level and slope are hidden outputs"
     source = "Harvey (1989), sec. 2.3.2"
     example = "local_linear_trend: {level_sd: 0.5, slope_sd: 0.02, noise_sd: 1, start: 100, slope: 0.3}"
@@ -215,6 +217,7 @@ class LocalLinearTrend(LocalLevel):
 
 class SeasonalRandomWalk(Integrated):
     kind = "seasonal_random_walk"
+    smooth = "filter"
     family = "linear"
     purpose = "a seasonal pattern that drifts: the value of a season ago plus a shock; or seasons sum to shocks"
     source = "Harvey (1989), sec. 2.3.4 for the dummy form; Box & Jenkins (1970), ch. 9"

@@ -15,6 +15,7 @@ from procgen.terms.followed import Shown
 
 class SwitchingNoise(Term):
     kind = "switching_noise"
+    smooth = "filter"
     family = "volatility"
     purpose = "white shocks with a spread for each state of a Markov chain: calm and stormy times"
     source = "Turner, Startz & Nelson (1989); moments: Timmermann (2000)"

@@ -46,6 +46,7 @@ def variance(square, omega, alpha, beta, h, out):
 
 class SwitchingGarch(Term):
     kind = "switching_garch"
+    smooth = "filter"
     family = "volatility"
     purpose = "white shocks with a garch variance for each state of a Markov chain, of which the chain shows one"
     source = "Haas, Mittnik & Paolella (2004)"

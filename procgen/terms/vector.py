@@ -57,6 +57,7 @@ def move(phi, theta, k, x, a):
 
 class VectorArma(Term):
     kind = "vector_arma"
+    smooth = "filter"
     family = "systems"
     purpose = "several series that move each other: each a mix of the last values and shocks of all; outputs by name"
     source = "Lütkepohl (2005), ch. 2 and 11; regression signs"
@@ -214,6 +215,7 @@ class VectorArma(Term):
 
 class VectorErrorCorrection(VectorArma):
     kind = "vector_error_correction"
+    smooth = "filter"
     purpose = "several series that wander together: their changes pull stated relations between them back to 0"
     source = "Engle & Granger (1987); Johansen (1995)"
     example = "vector_error_correction: {names: [a, b], relations: [[1, -1]], adjustment: [[-0.2], [0.1]], sd: 1}"

@@ -20,6 +20,7 @@ def accumulate(a, out, x):
 
 class RandomWalk(Term):
     kind = "random_walk"
+    smooth = "filter"
     family = "linear"
     purpose = "the running sum of shocks: x[0] is `start`, and the variance at step t is t·σ²"
     source = "Box & Jenkins (1970), ch. 4; Hamilton (1994), ch. 15"

@@ -21,6 +21,7 @@ def whole(name: str, value: float, what: str):
 
 class Hold(Term):
     kind = "hold"
+    smooth = "bend"
     family = "level and shape"
     purpose = "its body read every so many steps and held until the next reading: a value drawn once a day"
     source = "common practice, no source"
@@ -70,6 +71,7 @@ class Hold(Term):
 
 class RollingMean(Term):
     kind = "rolling_mean"
+    smooth = "filter"
     family = "combination"
     purpose = "the mean of its body over the last steps, this one among them; before step 0 it reads its past"
     source = "common practice, no source"
