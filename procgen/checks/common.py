@@ -3,15 +3,31 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
 from itertools import combinations
 from typing import TYPE_CHECKING, Any
 
-from procgen.checks.words import joined, sentence, sort_of
+from procgen.checks.words import cause, effects, joined, sort_of
 
 if TYPE_CHECKING:
     from procgen.checks.attribution import Groups
 
 _OF_A_BODY = ("spread", "memory", "clustering")  # a level is added to each series in its own way, and so is a law
+
+
+@dataclass(frozen=True)
+class Told:
+    """A departure in a sentence, the sorts of departure that may follow from it, and where else it shows alike."""
+
+    cause: str
+    effects: tuple[str, ...] = ()
+    alike: str = ""
+
+    @property
+    def line(self) -> str:
+        """All of it in one line."""
+        also = f"; also {', '.join(self.effects)}, which may follow from it" if self.effects else ""
+        return self.cause + also + (f"; alike in {self.alike}" if self.alike else "")
 
 
 def users(spec: Any) -> dict[str, list[str]]:
@@ -27,14 +43,14 @@ def users(spec: Any) -> dict[str, list[str]]:
     return {body: names for body, names in found.items() if len(names) > 1}
 
 
-def lines(found: Sequence[Groups], shared: Mapping[str, Sequence[str]]) -> list[str]:
-    """A sentence a series that departs, in order; one for all series that share a body which explains them.
+def tell(found: Sequence[Groups], shared: Mapping[str, Sequence[str]]) -> list[Told]:
+    """What departs, series by series and in order; once for all series that share a body which explains them.
 
     It does where each of them departs first in the same of its spread, memory or clustering, and every two of them
     depend on each other otherwise than stated.
     """
     by_series = {groups[0][0].series: groups for groups in found if sort_of(groups[0][0]) != "structure"}
-    told: dict[int, str] = {}
+    once: dict[int, Told | None] = {}
     for body, names in shared.items():
         pairs = [pair for a, b in combinations(names, 2) for pair in (f"{a} ~ {b}", f"{b} ~ {a}") if pair in by_series]
         if not set(names) <= by_series.keys() or len(pairs) < len(names) * (len(names) - 1) // 2:
@@ -44,10 +60,9 @@ def lines(found: Sequence[Groups], shared: Mapping[str, Sequence[str]]) -> list[
             continue
         mine = [by_series[name] for name in (*names, *pairs)]
         first = next(groups for groups in found if any(groups is one for one in mine[: len(names)]))
-        text = f"{body}, which {joined(names)} share: {sentence(first)}; alike in {joined([*names, *pairs])}"
+        says = f"{body}, which {joined(names)} share: {cause(first[0])}"
         for groups in mine:
-            told.setdefault(id(groups), "")
-        told[id(first)] = told[id(first)] or text
-    written = [told.get(id(groups), None) for groups in found]
-    sentences = [sentence(groups) if text is None else text for groups, text in zip(found, written, strict=True)]
-    return [text for text in sentences if text]
+            once.setdefault(id(groups), None)
+        once[id(first)] = once[id(first)] or Told(says, tuple(effects(first)), joined([*names, *pairs]))
+    every = [once.get(id(groups), Told(cause(groups[0]), tuple(effects(groups)))) for groups in found]
+    return [each for each in every if each is not None]

@@ -8,13 +8,16 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from procgen.checks.coverage import Coverage, blind, coverage, title
 from procgen.checks.judge import Finding
+
+if TYPE_CHECKING:
+    from procgen.checks.common import Told
 
 USUAL = 0.001  # chance of a false alarm
 KINDS = ("structure", "level", "spread", "memory", "clustering", "law", "dependence")
@@ -162,11 +165,16 @@ class Verdict:
         return pd.DataFrame([row.row() for row in self.rows], columns=list(COLUMNS))
 
     @property
-    def headline(self) -> list[str]:
+    def told(self) -> list[Told]:
+        """The departures in plain words, each with what may follow from it, the largest disagreement first."""
         from procgen.checks.common import users
 
         spec = getattr(self.origin, "spec", None)
-        return headline(self.rows, {} if spec is None else users(spec))
+        return _told(self.rows, {} if spec is None else users(spec))
+
+    @property
+    def headline(self) -> list[str]:
+        return [each.line for each in self.told]
 
     def to_dict(self) -> dict[str, Any]:
         """The verdict as plain data, in the shape of `validate --json`."""
@@ -235,13 +243,13 @@ def _rank(row: Check) -> tuple[int, float]:
     return order[row.outcome], row.log_p if row.log_p is not None else 0.0
 
 
-def headline(rows: Sequence[Check], shared: Mapping[str, Sequence[str]], most: int = 8) -> list[str]:
-    """A line a series that departs, what explains most first; what is wrong with the structure before all.
+def _told(rows: Sequence[Check], shared: Mapping[str, Sequence[str]], most: int = 8) -> list[Told]:
+    """What departs, once a series, what explains most first; what is wrong with the structure before all.
 
     `shared`: bodies that several series use, and these; they stand for series that depart alike.
     """
     from procgen.checks import common
     from procgen.checks.attribution import departures
 
-    lines = common.lines(departures(rows), shared)
-    return lines[:most] + ([f"and {len(lines) - most} more series, see the table"] if len(lines) > most else [])
+    told, more = common.tell(departures(rows), shared), "and {} more series, see the table"
+    return told[:most] + ([common.Told(more.format(len(told) - most))] if len(told) > most else [])

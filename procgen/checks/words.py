@@ -65,6 +65,7 @@ CONTINUED, SHIFTED = "end of a path and start of the next", "values some paths a
 GAP, TOGETHER = " of the gap", " of the sum"  # how the checks of a combination of series end, as `relations` has them
 _ALL_DIGITS = 17  # that tell any two numbers apart
 _COUNT = re.compile(r"(?<![\w.,−-])\d[\d,]*(?= (?:pairs? of )?(?:paths?|shocks?|cases?|steps?|values?)\b)")
+_FACTS = ("values", "constant")  # checks without chance, whose note says what is wrong
 _LEAST_P = math.log(1e-300)  # below this a p is only said to be smaller
 
 
@@ -159,19 +160,32 @@ def tally(counts: Mapping[str, int]) -> str:
 
 def sentence(groups: list[list[Check]]) -> str:
     """One line for the departures of one series: a group a kind, the one that explains most first."""
-    first, *others = groups
+    also = ", ".join(effects(groups))
+    return cause(groups[0]) + (f"; also {also}, which may follow from it" if also else "")
+
+
+def effects(groups: list[list[Check]]) -> list[str]:
+    """The sorts of departure that may follow from the first one, where that is no fact which says it all."""
+    return [] if _of_a_fact(groups[0][0]) else [sort_of(group[0]) for group in groups[1:]]
+
+
+def cause(first: list[Check]) -> str:
+    """What departs in a series, of one kind, in a sentence without what may follow from it."""
     top = first[0]
     who = f"{top.series}: " if top.series else ""
-    also = ", ".join(sort_of(group[0]) for group in others)
-    follow = f"; also {also}, which may follow from it" if also else ""
     if top.what in (FARTHEST, FARTHEST_SHOCK):
-        return f"{who}{top.note}{follow}"
+        return f"{who}{top.note}"
     if top.kind == "structure" and top.log_p is None:
         return f"{who}structure: {top.note}{_more(first)}"
-    if top.what in ("values", "constant") and top.note:
+    if top.what in _FACTS and top.note:
         return f"{who}level: {top.note}{_more(first)}"
     p = f", p {p_text(top.log_p)}" if top.log_p is not None else ""
-    return f"{who}{sort_of(top)}: {_says(top)} ({_seen(top)}{p}){_more(first)}{follow}"
+    return f"{who}{sort_of(top)}: {_says(top)} ({_seen(top)}{p}){_more(first)}"
+
+
+def _of_a_fact(top: Check) -> bool:
+    known = top.kind == "structure" and top.log_p is None and top.what not in (FARTHEST, FARTHEST_SHOCK)
+    return known or (top.what in _FACTS and bool(top.note))
 
 
 def _says(top: Check) -> str:

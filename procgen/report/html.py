@@ -13,16 +13,18 @@ from typing import TYPE_CHECKING
 
 from procgen.checks import coverage
 from procgen.checks.attribution import departures
-from procgen.checks.words import many, name_of, number, p_text, sentence, side_by_side, tally
+from procgen.checks.words import cause, joined, many, name_of, number, p_text, side_by_side, tally
 from procgen.report.pictures import gallery as galleries
 from procgen.report.pictures import page
 from procgen.report.pictures.gallery import Gallery
+from procgen.report.pictures.page import Departure
 from procgen.report.pictures.page_style import PAGE
 from procgen.report.pictures.safe import breakable, escaped
 from procgen.report.pictures.write import MARKS, write
 from procgen.report.text import CAUTION, none_is_found, reported
 
 if TYPE_CHECKING:
+    from procgen.checks.common import Told
     from procgen.checks.verdict import Check, Verdict
 
 _TITLES = {
@@ -143,11 +145,17 @@ def _digests(verdict: Verdict) -> Iterator[str]:
 
 
 def _found(verdict: Verdict) -> Iterator[str]:
-    lines = verdict.headline
-    if lines:
-        yield '<section><h2>What departs</h2><ul class="found">'
-        yield from (f"<li>{breakable(line)}</li>" for line in lines)
-        yield "</ul></section>"
+    told = verdict.told
+    if told:
+        yield '<section id="found"><h2>What departs</h2>'
+        yield from page.departures([Departure(each.cause, _effects(each)) for each in told])
+        yield "</section>"
+
+
+def _effects(told: Told) -> list[str]:
+    """What is said in small letters below a departure that stands for others."""
+    also = [f"also {joined(told.effects)}, which may follow from it"] if told.effects else []
+    return also + ([f"alike in {told.alike}"] if told.alike else [])
 
 
 def _covered(verdict: Verdict) -> Iterator[str]:
@@ -158,13 +166,13 @@ def _covered(verdict: Verdict) -> Iterator[str]:
         yield "</ul></section>"
 
 
-def _by_series(verdict: Verdict | None) -> dict[str, Sequence[str]]:
-    """A sentence for each kind of departure of each series, what explains most first."""
-    found: dict[str, list[str]] = {}
+def _by_series(verdict: Verdict | None) -> dict[str, Sequence[Departure]]:
+    """The departures of each series, with a sentence for each kind: what explains most, and what may follow from it."""
+    found: dict[str, list[Departure]] = {}
     for groups in departures(verdict.rows if verdict is not None else ()):
-        for rows in groups:
-            series = rows[0].series
-            found.setdefault(series, []).append(sentence([rows]).removeprefix(f"{series}: "))
+        series = groups[0][0].series
+        first, *others = (cause(rows).removeprefix(f"{series}: ") for rows in groups)
+        found.setdefault(series, []).append(Departure(first, others, "What may follow from it:"))
     return dict(found)
 
 
@@ -222,5 +230,5 @@ def _words(row: Check) -> str:
     """What departs in a sentence; of others what there is to say."""
     if row.outcome != "departs" or row.kind == "structure" or row.what == "values":
         return row.note
-    said = sentence([[row]]).removeprefix(f"{row.series}: ").partition(" (")[0]  # its numbers stand beside it
+    said = cause([row]).removeprefix(f"{row.series}: ").partition(" (")[0]  # its numbers stand beside it
     return f"{said}; {row.note}" if row.note else said

@@ -6,7 +6,7 @@ import numpy as np
 import pandas as pd
 import pytest
 
-from procgen.checks.common import lines, users
+from procgen.checks.common import tell, users
 from procgen.checks.validate import validate
 from procgen.checks.verdict import Check
 from procgen.ensemble.source import read_spec
@@ -63,6 +63,6 @@ def test_series_that_depart_in_other_ways_are_told_each_by_itself():
         return [[Check(series, "x", "", kind, 0.0, 1.0, 0.1, -50.0, "departs")]]
 
     found = [of("a", "memory"), of("b", "spread"), of("a ~ b", "dependence")]
-    assert [line.partition(":")[0] for line in lines(found, {"f": ["a", "b"]})] == ["a", "b", "a ~ b"]
+    assert [each.line.partition(":")[0] for each in tell(found, {"f": ["a", "b"]})] == ["a", "b", "a ~ b"]
     found = [of("a", "memory"), of("b", "memory")]  # but not their dependence
-    assert [line.partition(":")[0] for line in lines(found, {"f": ["a", "b"]})] == ["a", "b"]
+    assert [each.line.partition(":")[0] for each in tell(found, {"f": ["a", "b"]})] == ["a", "b"]

@@ -1,9 +1,10 @@
 """Pages with pictures: well formed, self-contained, escaped, of bounded size, and saying what they show."""
 
+import re
 import shutil
 import subprocess
 from dataclasses import replace
-from html import escape
+from html import escape, unescape
 from pathlib import Path
 
 import numpy as np
@@ -12,9 +13,10 @@ import pytest
 import procgen as pg
 from procgen.checks.judge import unit
 from procgen.checks.verdict import Check, Verdict
+from procgen.checks.words import joined
 from procgen.report.html import verdict_page, whole_page
 from procgen.report.pictures.gallery import of_data, of_spec_alone
-from procgen.report.pictures.safe import escaped, visible
+from procgen.report.pictures.safe import breakable, visible
 from procgen.report.pictures.sample import of_ensemble, of_spec, of_table
 from procgen.report.pictures.svg import poster
 from tests.report.pages import drawing, ensemble, self_contained
@@ -101,13 +103,39 @@ def test_what_departs_stands_first_and_at_its_series():
     text = verdict_page(verdict)
     self_contained(text)
     assert verdict.agrees is False and verdict.headline
-    for line in verdict.headline:
-        assert escaped(line) in text
+    for told in verdict.told:
+        assert f'<li><p class="cause">{breakable(told.cause)}</p>' in text
     assert text.index("What departs") < text.index('id="series-0"')
     section = text[text.index('id="series-0"') : text.index('id="series-1"')]
     assert '<ul class="found">' in section
     assert '<ul class="found">' not in text[text.index('id="series-1"') : text.index('id="checks"')]
     assert text.index('<tr class="departs">') < text.index('<tr class="agrees">')
+
+
+def test_what_may_follow_from_a_departure_stands_in_its_box():
+    """One box a cause, on top and at the series, in the order of the line in the terminal."""
+    found = ensemble({"x": AR, "y": GARCH}, paths=200)
+    stated = pg.load({**found.spec.raw, "series": {"x": [{"constant": 4.5}, AR[1]], "y": GARCH}})
+    verdict = pg.validate(found.to_pandas(), stated, false_alarm=1e-8)
+    (told,) = verdict.told
+    assert told.line == verdict.headline[0] and len(told.effects) > 1 and told.cause.startswith("x: level: ")
+    top, at_series = boxes(verdict_page(verdict))
+    assert top == (told.cause, [f"also {joined(told.effects)}, which may follow from it"])
+    cause, effects = at_series
+    assert cause == told.cause.removeprefix("x: ")
+    assert tuple(line.partition(":")[0] for line in effects) == told.effects
+
+
+def boxes(text):
+    """Of each box of what departs, the cause and the lines below it."""
+    inside = r'<li><p class="cause">(.*?)</p>(?:\s*<p class="effects">.*?</p>)?\s*'
+    inside += r'(?:<ul class="effects">(.*?)</ul>)?\s*</li>'
+    for cause, effects in re.findall(inside, text, re.DOTALL):
+        yield plain(cause), [plain(line) for line in re.findall("<li>(.*?)</li>", effects)]
+
+
+def plain(text):
+    return unescape(text.replace("<wbr>", ""))
 
 
 # escaping

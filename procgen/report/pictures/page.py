@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
 from typing import Any
 
 from procgen.report.pictures.chart import Chart
@@ -15,6 +16,29 @@ MOST_TEXT = 60_000  # letters of a spec that are shown: one may hold tables
 MANY = 3  # series from which a page begins with a list of them
 
 
+@dataclass(frozen=True)
+class Departure:
+    """A sentence about what departs, and sentences about what may follow from it, under a heading of their own."""
+
+    cause: str
+    effects: Sequence[str] = ()
+    heading: str = ""
+
+
+def departures(found: Sequence[Departure]) -> Iterator[str]:
+    """Each departure in a box, and in it, smaller, what may follow from it."""
+    yield '<ul class="found">'
+    for each in found:
+        yield f'<li><p class="cause">{breakable(each.cause)}</p>'
+        if each.effects:
+            yield f'<p class="effects">{each.heading}</p>' if each.heading else ""
+            yield '<ul class="effects">'
+            yield from (f"<li>{breakable(line)}</li>" for line in each.effects)
+            yield "</ul>"
+        yield "</li>"
+    yield "</ul>"
+
+
 def contents(gallery: Gallery) -> Iterator[str]:
     """A list of the series, where there are many."""
     if len(gallery.sections) >= MANY:
@@ -24,8 +48,8 @@ def contents(gallery: Gallery) -> Iterator[str]:
         yield "</ul></nav>"
 
 
-def series(gallery: Gallery, found: dict[str, Sequence[str]]) -> Iterator[str]:
-    """A section for each series; `found` are sentences about what departs in it."""
+def series(gallery: Gallery, found: dict[str, Sequence[Departure]]) -> Iterator[str]:
+    """A section for each series; `found` is what departs in it."""
     equations = _equations(gallery.sample.spec, [section.subject.name for section in gallery.sections])
     for place, section in enumerate(gallery.sections):
         yield f'<section class="series" id="series-{place}">'
@@ -41,7 +65,7 @@ def series(gallery: Gallery, found: dict[str, Sequence[str]]) -> Iterator[str]:
         yield "</section>"
 
 
-def _heading(section: Section, found: Sequence[str]) -> Iterator[str]:
+def _heading(section: Section, found: Sequence[Departure]) -> Iterator[str]:
     subject = section.subject
     unit = f' <span class="unit">{escaped(subject.unit)}</span>' if subject.unit else ""
     yield f"<h2>{breakable(subject.name)}{unit}</h2>"
@@ -51,9 +75,7 @@ def _heading(section: Section, found: Sequence[str]) -> Iterator[str]:
     verdict, reasons = subject.stated.theory.stationarity
     yield f"<p>Stated: {breakable('; '.join([verdict, *reasons]))}.</p>"
     if found:
-        yield '<ul class="found">'
-        yield from (f"<li>{breakable(line)}</li>" for line in found)
-        yield "</ul>"
+        yield from departures(found)
 
 
 def figures(charts: Sequence[Chart], name: str) -> Iterator[str]:

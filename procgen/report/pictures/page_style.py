@@ -25,8 +25,12 @@ section { margin-top: 2.2rem; padding-top: 1.1rem; border-top: 1px solid var(--l
 main > section:first-child { margin-top: 1rem; border-top: 0; }
 .unit { color: var(--soft); font-weight: 400; }
 ul.found { padding: 0; list-style: none; margin: .8rem 0; }
-ul.found li { background: var(--card); border: 1px solid var(--line); border-left: .35rem solid var(--alarm);
+ul.found > li { background: var(--card); border: 1px solid var(--line); border-left: .35rem solid var(--alarm);
   padding: .55rem .9rem; margin: .5rem 0; max-width: 70rem; }
+.found p.cause { margin: 0; max-width: none; font-size: 1.08rem; line-height: 1.42; }
+.found .effects { margin: .3rem 0 0; color: var(--soft); font: .85rem/1.45 SANS; }
+.found ul.effects { padding: 0 0 0 .9rem; border-left: 2px solid var(--line); list-style: none; }
+.found ul.effects li + li { margin-top: .15rem; }
 ul.plain { padding-left: 1.2rem; margin: .4rem 0; max-width: 60rem; }
 pre { font: 13px/1.5 ui-monospace, SFMono-Regular, Menlo, Consolas, "DejaVu Sans Mono", monospace; margin: .6rem 0;
   background: var(--card); border: 1px solid var(--line); padding: .7rem .9rem; white-space: pre-wrap; }
