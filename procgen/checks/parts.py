@@ -122,12 +122,17 @@ class _Chain:
         pieces = self.ensemble.stored(part.block.first_path, part.block.end_path)
         try:
             for number, part in self.parts.items():
-                blocks = self._pieces(number, part.block, pieces)
-                # Parts that follow each other must be cut at the same paths, hence each is handed on whole.
-                yield from grouped(blocks, part.block) if len(self.parts) == 1 else [_whole(blocks, part.block)]
+                yield from self._in_step(self._pieces(number, part.block, pieces), part.block)
             next(pieces, None)  # what comes after the last row is looked at, too
         except EnsembleError as error:
             self.faults.append((str(part.block), str(error)))
+
+    def _in_step(self, blocks: Blocks, part: Block) -> Blocks:
+        """Blocks of a part cut anew so that those of the same paths come in the order of their steps."""
+        if part.paths == 1:
+            return blocks
+        # Parts that follow each other must be cut at the same paths, hence each is handed on whole.
+        return grouped(blocks, part) if len(self.parts) == 1 else [_whole(blocks, part)]
 
     def _pieces(self, number: int, part: Block, pieces: Iterator[Any]) -> Iterator[tuple[int, int, Values]]:
         leaves = {name: digest.Leaves(part) for name in self.ensemble.names}
