@@ -2,23 +2,66 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterator
 from typing import Any
+
+import numpy as np
+
+from procgen.checks.probes import probe_steps
 
 # Kinds that can hold a value where it is, or switch off what moves it.
 _HOLDING = frozenset({"clip", "hinge", "min", "max", "flag", "chain", "regimes", "switching_noise"})
 
 
-def may_stay(theory: Any, graph: Any, name: str) -> bool:
-    """Whether some term may hold the values of a series, and no chance is simply added to it that would part them."""
-    from procgen.theory.sources import PROCESS
+_FAR = 7.0  # standard deviations that a body without a law may be off its mean
+
+
+def flattened(theory: Any, name: str, steps: int) -> frozenset[str]:
+    """The keys of the nodes of a series whose bodies go where double precision has one value for all of them.
+
+    As exponentials do that are smaller than it can tell, and sigmoids that are nearer to a level.
+    """
+    from procgen.theory.laws import LOST
+
+    found = set()
+    for node in theory.graph.order([theory.graph.series[name]]):
+        least, most = node.term.told if hasattr(node, "term") else (-math.inf, math.inf)
+        if (least, most) != (-math.inf, math.inf) and _beyond(theory, node.inputs[0], least, most, steps) > LOST:
+            found.add(node.key)
+    return frozenset(found)
+
+
+def _beyond(theory: Any, node: Any, least: float, most: float, steps: int) -> float:
+    """The chance that a node is beyond two numbers at some probe, by its law where that is known."""
+    from procgen.theory.series import SeriesTheory
+
+    body, at = SeriesTheory(node.key, theory.written[id(node)]), np.array(probe_steps(steps))
+    mean, variance = body.mean(at), body.variance(at)
+    if mean is None or variance is None:
+        return 0.0
+    with np.errstate(invalid="ignore"):
+        reach = _FAR * np.sqrt(np.maximum(variance, 0.0))
+        worst = np.argmax(np.maximum(mean + reach - most, least - mean + reach))
+        far = bool(np.any((mean - reach < least) | (mean + reach > most)))
+    law = body.marginal(int(at[worst])) if far else None
+    return float(far) if law is None else float(law.cdf(least) + law.sf(most))
+
+
+def may_stay(theory: Any, graph: Any, name: str, flat: frozenset[str] = frozenset()) -> bool:
+    """Whether some term may hold the values of a series, and no chance is simply added to it that would part them.
+
+    `flat`: the nodes that are `flattened`.
+    """
+    from procgen.theory.sources import OPAQUE, PROCESS
 
     kinds = {node.term.kind for node in graph.order([graph.series[name]]) if getattr(node, "term", None)}
-    if not kinds & _HOLDING:
+    if not (kinds & _HOLDING or flat):
         return False
     sources = theory.expression.linear.sources
-    bent = {inner.key for source in theory.expression.sources if source.kind == PROCESS for inner in _inside(source)}
-    return all(source.kind == PROCESS or source.key in bent for source in sources)
+    made = (PROCESS, OPAQUE)  # of others, in some way
+    bent = {inner.key for source in theory.expression.sources if source.kind in made for inner in _inside(source)}
+    return all(source.kind in made or source.key in bent for source in sources)
 
 
 def few_shocks(theory: Any) -> Any | None:
@@ -32,5 +75,5 @@ def few_shocks(theory: Any) -> Any | None:
 
 def _inside(process: Any) -> Iterator[Any]:
     """The sources that a process is made of."""
-    for ingredient in process.detail.ingredients:
+    for ingredient in getattr(process.detail, "ingredients", process.detail):
         yield from getattr(ingredient, "sources", ())

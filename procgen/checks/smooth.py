@@ -7,17 +7,19 @@ answer is no wherever a yes is not certain.
 
 from __future__ import annotations
 
+from collections.abc import Container
 from typing import Any
 
 
-def smooth(graph: Any, name: str, steps: int) -> bool:
+def smooth(graph: Any, name: str, steps: int, flat: Container[str] = ()) -> bool:
     """Whether no value of a series has a chance of its own, and none lies on a grid, by its terms; for `steps` steps.
 
-    A lag of more than half of the steps may show little but what a walk was before it began.
+    `flat`: the keys of nodes that double precision gives one value where they have many (`atoms.flattened`). A lag of
+    more than half of the steps may show little but what a walk was before it began.
     """
     root = graph.series[name]
     lags = sum(node.term.by for node in graph.order([root]) if _kind(node) == "lag")
-    return 2 * lags <= steps and _off_grids(graph, root)
+    return 2 * lags <= steps and _off_grids(graph, root, flat)
 
 
 def _kind(node: Any) -> str | None:
@@ -30,37 +32,37 @@ def _way(node: Any) -> str:
     return node.term.smooth if node.term.kind else "filter"
 
 
-def _off_grids(graph: Any, node: Any) -> bool:
+def _off_grids(graph: Any, node: Any, flat: Container[str]) -> bool:
     kind = _kind(node)
     if kind is None:
         return node.law.points is None
-    if not _way(node) or not _sources(graph, node):
+    if not _way(node) or node.key in flat or not _sources(graph, node):
         return False
     if hasattr(node.term, "output"):  # a hidden one, such as the number of jumps
         return False
     if 0.0 in (getattr(node.term, "exponent", 1.0), getattr(node.term, "factor", 1.0)):
         return False
     if kind == "sum":
-        return _sum(graph, node)
+        return _sum(graph, node, flat)
     if kind == "difference" and not _filtered(graph, node):
         return False
     moving = [part for part in node.inputs if _sources(graph, part)]
     still = [part for part in node.inputs if not _sources(graph, part)]
     if kind == "product":
-        return not any(_meets_zero(part) for part in still) and _apart(graph, moving) and _all(graph, moving)
-    return not still and _all(graph, moving)
+        return not any(_meets_zero(part) for part in still) and _apart(graph, moving) and _all(graph, moving, flat)
+    return not still and _all(graph, moving, flat)
 
 
-def _sum(graph: Any, node: Any) -> bool:
+def _sum(graph: Any, node: Any, flat: Container[str]) -> bool:
     """Parts that have no shock in common need but one that is off grids; filters of the same shocks, all of them."""
     moving = [part for part in node.inputs if _sources(graph, part)]
     if _apart(graph, moving):
-        return any(_off_grids(graph, part) for part in moving)
-    return _filtered(graph, node) and _all(graph, moving)
+        return any(_off_grids(graph, part, flat) for part in moving)
+    return _filtered(graph, node) and _all(graph, moving, flat)
 
 
-def _all(graph: Any, nodes: list[Any]) -> bool:
-    return all(_off_grids(graph, node) for node in nodes)
+def _all(graph: Any, nodes: list[Any], flat: Container[str]) -> bool:
+    return all(_off_grids(graph, node, flat) for node in nodes)
 
 
 def _sources(graph: Any, node: Any) -> set[int]:

@@ -14,7 +14,7 @@ from typing import Any
 import numpy as np
 
 from procgen.checks import farthest, missing, repeated
-from procgen.checks.atoms import few_shocks, may_stay
+from procgen.checks.atoms import few_shocks, flattened, may_stay
 from procgen.checks.copies import repeats_of
 from procgen.checks.extremes import MARK, Reach
 from procgen.checks.filled import FILLED
@@ -159,13 +159,14 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
             way.salt = f" of seed {spec.seed}"
         blind = isinstance(way, Cannot) or way.scores is None
         plan = plan_series(name, th[name], steps, grain, _periods(graph, name), blind)
-        plan.may_stay = may_stay(th[name], graph, name)
-        plan.smooth = smooth(graph, name, steps)
+        flat = flattened(th, name, steps)
+        plan.may_stay = may_stay(th[name], graph, name, flat)
+        plan.smooth = smooth(graph, name, steps, flat)
         series.append(plan)
         routes[name] = way
         random = th[name].random
         reach = Reach(th[name], grain, steps, spec.paths * steps) if random else None
-        possible = possible_of(graph, name, declared, vanishes(th[name], steps)) if random else Possible()
+        possible = possible_of(graph, name, declared, bool(flat) or vanishes(th[name], steps)) if random else Possible()
         kind, few = column_type(graph, name), lumpy(th[name])
         precision.append(
             Precision(name, kind, declared.decimals, random, few, reach, possible=possible, smooth=plan.smooth)

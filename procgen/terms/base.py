@@ -22,6 +22,8 @@ from procgen.chance.laws import Normal
 from procgen.spec.declare import LawOf, Parameter, Real
 from procgen.terms.support import EVERYTHING, Support
 
+LEAST_LOG = -708.0  # of what an exponential gives with all its digits
+
 Array = np.ndarray
 State = dict[str, Array]
 Cell = tuple[Array, Array]
@@ -114,6 +116,8 @@ class Term:
     why_not_portable: ClassVar[str] = ""
     longest: ClassVar[int | None] = None  # the most steps it can be drawn for; None when any number
     no_past: ClassVar[str] = ""  # why there is less before step 0 than is read, and what to do; where not `before`
+
+    told: tuple[float, float] = (-np.inf, np.inf)  # values of its body beyond which double precision tells no two apart
 
     address: str = ""  # series.label, set when the term takes its place in a graph
     arity: int = 0  # how many inputs it has there

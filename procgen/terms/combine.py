@@ -6,7 +6,7 @@ import numpy as np
 
 from procgen.chance.portable import exp, log
 from procgen.spec.declare import Body, Parameter, Text
-from procgen.terms.base import Ahead, Term, Unknown, number
+from procgen.terms.base import LEAST_LOG, Ahead, Term, Unknown, number
 from procgen.terms.support import POSITIVE, added, finite
 
 OF = Parameter("of", "", Body(), "what it is applied to; a list is a sum")
@@ -141,6 +141,7 @@ class Exp(Term):
     knows = "mean, covariance and lognormal law for a Gaussian body; moments for shocks of most laws, where they exist"
     composition = True
     parameters = (OF,)
+    told = LEAST_LOG, np.inf
 
     def reach(self, head):
         return (head,)

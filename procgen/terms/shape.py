@@ -11,6 +11,7 @@ from procgen.terms.combine import OF
 from procgen.terms.support import INF, Support, either, finite
 
 LARGEST = 700.0  # where exp overflows; a sigmoid is flat long before
+TOLD = 16 * 2.0**-52  # of a level's size: as far from it, double precision tells values apart
 
 
 class Elementwise(Term):
@@ -179,16 +180,26 @@ class Sigmoid(Elementwise):
         rest = exp(np.minimum(np.maximum(-x, -LARGEST), LARGEST))
         return self.low + (self.high - self.low) / (1.0 + rest)
 
+    @property
+    def told(self):
+        width = self.high - self.low
+        end = min(float(log(width / (TOLD * max(abs(self.low), width)))), LARGEST)
+        return -end if self.low else -LARGEST, end
+
     def invert(self, values, known, state, at):
         if np.any((values <= self.low) | (values >= self.high)):
             return Unknown(f"some values are not between {number(self.low)} and {number(self.high)}")
-        return _log_odds(values, self.low, self.high), {}
+        odds, (least, most) = _log_odds(values, self.low, self.high), self.told
+        if np.any((odds <= least) | (odds >= most)):
+            levels = f"{number(self.low)} or {number(self.high)}"
+            return Unknown(f"some values are nearer to {levels} than double precision tells apart")
+        return odds, {}
 
     def support(self, body):
         return Support(float(self.low), float(self.high))
 
     def moments(self, axis, body):
-        return axis.squeezed(body, self.of_value, float(self.low), float(self.high))
+        return axis.squeezed(body, self.of_value, float(self.low), float(self.high), self.told)
 
     def equation(self, body):
         return f"y[t] = {number(self.low)} + {number(self.high - self.low)}/(1 + exp(−{body}[t]))"

@@ -15,10 +15,11 @@ from procgen.theory import known
 from procgen.theory.expression import Expression
 from procgen.theory.known import Known
 from procgen.theory.lattice import Rounded
-from procgen.theory.laws import is_gaussian, marginal
+from procgen.theory.laws import LOST, is_gaussian, marginal
 from procgen.theory.lumps import Bounded, Folded, Mapped
 from procgen.theory.processes import Curved, Hinged, Process
 from procgen.theory.sources import Space
+from procgen.theory.unknown import Unknown
 from procgen.theory.verdict import judge
 
 
@@ -78,15 +79,26 @@ class Bending:
         """f(x) for a smooth f of slow growth: by its Hermite series where x is Gaussian."""
         return self._of_gaussian(x, f, Curved(self.name, x, f))
 
-    def squeezed(self, x: Expression, f: Callable[[np.ndarray], np.ndarray], low: float, high: float) -> Expression:
-        """f(x) for the S-curve f from one level to another."""
+    def squeezed(
+        self,
+        x: Expression,
+        f: Callable[[np.ndarray], np.ndarray],
+        low: float,
+        high: float,
+        told: tuple[float, float] = (-np.inf, np.inf),
+    ) -> Expression:
+        """f(x) for the S-curve f from one level to another, whose digits are lost where x is not within `told`."""
 
         def law(of: Any) -> Mapped:
+            if float(of.cdf(told[0]) + of.sf(told[1])) > LOST:
+                raise Unknown(f"values of {name} are nearer to its levels than double precision tells apart")
+
             def rise(y: np.ndarray) -> np.ndarray:
                 return (high - low) / ((y - low) * (high - y))
 
             return Mapped(of, f, lambda y: np.log((y - low) / (high - y)), rise, (low, high))
 
+        name = self.name
         return self.lawful(self.curved(x, f), x, law)
 
     def log_odds(self, x: Expression, f: Callable[[np.ndarray], np.ndarray], low: float, high: float) -> Expression:

@@ -6,6 +6,7 @@ from typing import Any
 
 import numpy as np
 
+from procgen.terms.base import LEAST_LOG
 from procgen.theory import exponentials
 from procgen.theory.covariance import covariance
 from procgen.theory.expression import Expression
@@ -16,6 +17,7 @@ from procgen.theory.sources import GARCH, IID, OPAQUE, PROCESS, SQUARES, Source,
 from procgen.theory.unknown import Unknown
 
 ROUNDING = 2e-15  # of the numbers that are subtracted
+LOST = 1e-9  # chance of values whose digits are lost, from which on the law is not that of what is stored
 
 
 def is_gaussian(x: Expression) -> bool:
@@ -140,6 +142,9 @@ def _lognormal(space: Space, term: Term, scale: float, level: float, at: np.ndar
     variance = float(covariance(space, term.exponent, term.exponent, at, at)[0])
     if variance <= 0.0:
         raise Unknown("the value at that step is known, not random")
+    small = (LEAST_LOG - np.log(abs(scale))) / np.sqrt(variance) if scale else np.inf
+    if stats.norm.cdf(small) > LOST:
+        raise Unknown("some values are smaller than double precision tells: they are stored as 0, or with few digits")
     law = stats.lognorm(np.sqrt(variance), scale=abs(scale))
     return stats.lognorm(np.sqrt(variance), loc=level, scale=scale) if scale > 0 else Affine(law, level, -1.0)
 

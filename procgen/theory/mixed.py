@@ -19,7 +19,7 @@ class MixedTheory(Theory):
     """The theory of a spec with parameters drawn by path; `series` that have none are as they are."""
 
     def __init__(self, typical: Theory, varied: Any):
-        super().__init__(dict(typical.series), typical.names, typical.axis, typical.graph)
+        super().__init__(dict(typical.series), typical.names, typical.axis, typical.graph, typical.written)
         self._typical, self._varied = typical, varied
         self._used = {name: parameters_of(part(varied.spec, (name,))) for name in typical.series}
         self._mixtures: dict[tuple[str, ...], Mixture] = {}

@@ -59,6 +59,7 @@ class Theory(Mapping[str, SeriesTheory]):
     names: tuple[str, ...] = ()  # of `correlation`, the leader first
     axis: Axis = field(default_factory=Axis)
     graph: Any = None  # of the terms that it is the theory of
+    written: Mapping[int, Expression] = field(default_factory=dict)  # what each of its nodes wrote, by identity
 
     def __getitem__(self, name: str) -> SeriesTheory:
         if name not in self.series:
@@ -184,7 +185,7 @@ def theory(spec: Any, graph: Any = None) -> Theory:
     series = {}
     for name in spec.series:
         series[name] = SeriesTheory(name, _moments(axis, graph.series[name], memo), _recorded(graph, name))
-    return Theory(series, tuple(names), axis, graph)
+    return Theory(series, tuple(names), axis, graph, memo)
 
 
 def _recorded(graph: Any, name: str) -> bool:
