@@ -84,6 +84,7 @@ def _series(theory: SeriesTheory, facts: dict[str, Any], unit: str | None, lags:
     lines += _wrapped(reason for reason in facts["stationarity"]["reasons"] if not _said_below(reason, facts))
     if "past" in facts:
         lines += _wrapped(_past(facts["past"]))
+    lines += _wrapped(facts.get("unfelt", ()))
     if "missing" in facts:
         share, gap = facts["missing"]["share"], facts["missing"]["gap"]
         text = f"{share:.4g} of its values are missing, in gaps of {gap:.4g} steps on average, whatever they are"

@@ -159,6 +159,10 @@ class Term:
         """The term in the usual notation, with its numbers."""
         raise NotImplementedError
 
+    def unfelt(self, steps: int) -> Iterable[str]:
+        """What is stated for a time and shows in none of so many steps, as sentences that follow the term's name."""
+        return ()
+
     def past(self) -> int | None:
         """How many values before step 0 the term can give at most; None when any number."""
         return None
@@ -296,6 +300,11 @@ def signed(x: float, what: str) -> str:
     if size == "1" and abs(x) != 1:
         size = repr(float(abs(x)))  # a root near 1 is not a unit root
     return f"{'−' if x < 0 else '+'} {size}{' ' if size and what else ''}{what}"
+
+
+def after_last(x: float, steps: int) -> str:
+    """`at step 80, after the last step 49`; empty for a time that is not."""
+    return f"at step {number(x)}, after the last step {number(steps - 1)}" if x > steps - 1 else ""
 
 
 def steps_long(x: float) -> str:

@@ -6,7 +6,7 @@ import numpy as np
 
 from procgen.chance.portable import exp
 from procgen.spec.declare import Body, Choice, Moment, Parameter, Real, Span
-from procgen.terms.base import Ahead, Array, Term, number, steps_since
+from procgen.terms.base import Ahead, Array, Term, after_last, number, steps_since
 from procgen.terms.level import Known
 
 LOG_2 = 0.6931471805599453
@@ -50,6 +50,13 @@ class Event(Known):
         felt = (since >= 0.0) if self.shape == "step" else (since >= 0.0) & (since < length)
         return np.where(felt, self.size, 0.0)
 
+    def unfelt(self, steps):
+        at, length = self.values["at"], 1.0 if self.length is None else self.length
+        if late := after_last(at, steps):
+            yield f"begins {late}: no value shows it"
+        elif self.shape == "pulse" and at + length <= 0.0:
+            yield f"is over at step {number(at + length)}, by step 0: no value shows it"
+
     def equation(self, *inputs):
         start, length = number(self.values["at"]), number(1.0 if self.length is None else self.length)
         size, gone = number(self.size), steps_since(self.values["at"])
@@ -83,6 +90,12 @@ class Schedule(Term):
         if self.fade is None:
             return np.where(since >= 0.0, 1.0, 0.0)
         return np.minimum(np.maximum(since / self.fade, 0.0), 1.0)
+
+    def unfelt(self, steps):
+        if late := after_last(self.until, steps):
+            yield f"changes {late}: its second body is never there"
+        elif self.until + (self.fade or 0.0) <= 0.0:
+            yield f"has changed by step {number(self.until + (self.fade or 0.0))}: its first body is never there"
 
     def reach(self, head):
         return (head, head)

@@ -7,7 +7,7 @@ import numpy as np
 from procgen.chance.kernel import kernel
 from procgen.chance.laws import LAWS
 from procgen.spec.declare import Moment, Parameter, Real, Records, Span
-from procgen.terms.base import Ahead, Draw, Term, number, steps_long
+from procgen.terms.base import Ahead, Draw, Term, after_last, number, steps_long
 from procgen.terms.support import BINARY
 
 UNIFORM = LAWS["uniform"]()
@@ -86,6 +86,13 @@ class Flag(Term):
             later = True if span["until"] is None else steps < span["until"]
             found = found | ((steps >= span["from"]) & later)
         return np.where(found, 1.0, 0.0)
+
+    def unfelt(self, steps):
+        for span in self.spans:
+            if late := after_last(span["from"], steps):
+                yield f"is on {late}: no value shows it"
+            elif span["until"] is not None and span["until"] <= 0.0:
+                yield f"is off again at step {number(span['until'])}, by step 0: no value shows it"
 
     def draws(self):
         return () if self.spans else (Draw("chain", UNIFORM),)

@@ -8,7 +8,7 @@ from itertools import pairwise
 import numpy as np
 
 from procgen.spec.declare import Moment, Parameter, Real, Records
-from procgen.terms.base import Ahead, Array, Term, number, signed
+from procgen.terms.base import Ahead, Array, Term, after_last, number, signed
 from procgen.terms.rows import row_in
 from procgen.terms.support import finite
 
@@ -110,6 +110,11 @@ class Trend(Known):
             x = x + (bend["slope"] - slope) * (np.maximum(t - bend["at"], 0.0) - at_0)
             slope = bend["slope"]
         return x
+
+    def unfelt(self, steps):
+        for bend in self.bends:
+            if late := after_last(bend["at"], steps):
+                yield f"bends {late}: no value shows it"
 
     def equation(self, *inputs):
         text = f"x[t] = {number(self.level)} {signed(self.slope, 't')}"

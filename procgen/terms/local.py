@@ -10,6 +10,8 @@ from procgen.spec.local import CalendarDays, CalendarPart, EveryYear
 from procgen.terms.base import Array, number, signed
 from procgen.terms.level import Known
 
+LOOKED_AT = 1_000_000  # steps that are looked at for a listed day
+
 
 class Calendar(Known):
     kind = "calendar"
@@ -99,6 +101,10 @@ class Holidays(Known):
         for size, hit in ((self.day_before, self.days.hit(steps, 1)), (self.day_after, after)):
             x = x + np.where(hit & ~today, size, 0.0)
         return x
+
+    def unfelt(self, steps):
+        if steps <= LOOKED_AT and not any(self.days.hit(np.arange(steps), d).any() for d in (-1, 0, 1)):
+            yield "has none of its days, nor one beside them, within the steps: no value shows it"
 
     def equation(self, *inputs):
         count = len(self.days.single) + len(self.days.yearly)

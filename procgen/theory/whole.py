@@ -112,6 +112,7 @@ class Theory(Mapping[str, SeriesTheory]):
         for name, told in series.items():
             told.update(self._missing(name))
             told.update(self._left(name))
+            told.update(self._unfelt(name))
         cross = [entry for a, b in combinations(self.series, 2) if (entry := self._cross_entry(a, b, at))]
         return {"series": series, "cross": cross, "correlation": [pair.as_dict() for pair in self.correlated]}
 
@@ -124,6 +125,18 @@ class Theory(Mapping[str, SeriesTheory]):
             return {}
         gap = found.term.gap or 1.0 / (1.0 - found.term.share)
         return {"missing": {"share": found.term.share, "gap": gap}}
+
+    def _unfelt(self, name: str) -> dict[str, Any]:
+        """What is stated for a time that is not among the steps; nothing where all is felt."""
+        nodes = [] if self.graph is None else self.graph.order([self.graph.series[name]])
+        steps = self.graph.spec.time.steps if nodes else 0
+        found = [
+            f"{node.name} {text}"
+            for node in nodes
+            if hasattr(node, "term")
+            for text in node.term.unfelt(steps * node.pace)
+        ]
+        return {"unfelt": found} if found else {}
 
     def _left(self, name: str) -> dict[str, Any]:
         """The recorded past that a series leaves from, and what could not be conditioned on it; nothing without one."""
