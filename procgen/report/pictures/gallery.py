@@ -6,7 +6,7 @@ from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
-from procgen.report.pictures import between, fans, laws, memory
+from procgen.report.pictures import between, fans, laws, memory, seasons
 from procgen.report.pictures.chart import Chart
 from procgen.report.pictures.sample import Sample, of_ensemble, of_origin, of_spec
 from procgen.report.pictures.subject import Subject, subjects
@@ -93,6 +93,7 @@ def _gallery(sample: Sample, record: Sequence[tuple[str, str]], suspects: Sequen
 
 def _charts(subject: Subject) -> Iterator[Chart]:
     yield from fans.fans(subject)
+    yield from seasons.seasons(subject)
     for draw in (memory.autocorrelations, memory.squares, laws.variance, laws.density, laws.quantile_plot):
         chart = draw(subject)
         if chart is not None:

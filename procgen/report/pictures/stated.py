@@ -55,6 +55,12 @@ class Stated:
         found = [int(p) for p in self.theory.expression.mean_path.periods or () if p > 1 and float(p).is_integer()]
         return max(found, default=None)
 
+    @property
+    def periods(self) -> frozenset[float]:
+        """The periods of all that repeats in its mean, whatever else moves it."""
+        pieces = self.theory.expression.mean_path.pieces
+        return frozenset().union(*(piece.periods for piece in pieces if piece.periods))
+
     def mean(self, at: NDArray) -> NDArray | None:
         return self.theory.mean(at)
 

@@ -27,6 +27,7 @@ class Subject:
     grain: float  # distance of neighbouring values as stored, 0 where it is not declared
     stated: Stated
     sample: Sample
+    seasons: tuple[int, ...] = ()  # whole periods of its mean and of its terms, in steps
 
     @property
     def values(self) -> NDArray:
@@ -77,8 +78,16 @@ def subjects(sample: Sample, theory: Any) -> list[Subject]:
         whole = declared.decimals is not None or declared.type == "int64"
         stated = Stated(theory[name], sample.steps, ends(graph.series[name]))
         grain = 10.0 ** -(declared.decimals or 0) if whole else 0.0
-        out.append(Subject(name, declared.unit, grain, stated, sample))
+        out.append(Subject(name, declared.unit, grain, stated, sample, _seasons(graph, name, stated)))
     return out
+
+
+def _seasons(graph: Any, name: str, stated: Stated) -> tuple[int, ...]:
+    """The periods of what repeats in the mean, and of the terms that a series is made of."""
+    terms = [getattr(node, "term", None) for node in graph.order([graph.series[name]])]
+    found = [term.values.get("period") for term in terms if term is not None]
+    every = {float(p) for p in [*stated.periods, *found] if isinstance(p, int | float)}
+    return tuple(sorted(int(p) for p in every if p > 1 and p.is_integer()))
 
 
 def texts(*columns: Any) -> list[tuple[str, ...]]:
