@@ -84,6 +84,7 @@ class Table:
         step = self._steps(frame, names, path)
         if names.clock is not None:
             self._compare_times(frame[names.clock], step)
+        self._refuse_window(int(step.min()), int(step.max()))
         self.paths, self.steps = len(self.labels), int(step.max()) + 1
         if self.paths * self.steps > 4 * len(frame) + 1_000_000:
             raise TableError(
@@ -244,6 +245,16 @@ class Table:
             return
         self._checks.append(Check.fact("", "times", "all rows", fault, "every time is that of its step"))
 
+    def _refuse_window(self, first: int, last: int) -> None:
+        """A table that begins later departs from nothing: it lacks what its values are to be held against."""
+        if first > 0:
+            one = " (if its steps count from 1, number them from 0)" if first == 1 else ""
+            raise TableError(
+                f"{self.where} cannot be judged as it is: expected steps from 0 on, got {_steps(first, last)}{one}; a spec "
+                f"states its values from step 0 on, so give {_steps(0, first - 1)} too; where the spec states the same of "
+                f"every step, numbers from 0 will do"
+            )
+
     def _place(self, path: NDArray, step: NDArray) -> None:
         """Sort rows by path and step; name what is missing or there twice."""
         key = path * self.steps + step
@@ -263,14 +274,8 @@ class Table:
         if missing:
             gap = np.flatnonzero(self._key != np.arange(len(self._key)))
             first = self._where(int(gap[0]) if gap.size else len(self._key))
-            begin, are = int((self._key % self.steps).min()), "is" if missing == 1 else "are"
-            late = (
-                f": no path has a step before {begin}; if this is a window that starts at step {begin}, it cannot be "
-                f"compared as it is: give the steps from 0 on too (a spec states its values from step 0)"
-                if begin
-                else ""
-            )
-            fault = "; ".join(filter(None, [fault, f"{many(missing, 'row')} {are} missing, the first {first}{late}"]))
+            are = "is" if missing == 1 else "are"
+            fault = "; ".join(filter(None, [fault, f"{many(missing, 'row')} {are} missing, the first {first}"]))
             self.absent = missing
         self._checks.append(Check.fact("", "every path and step once", "all rows", fault, "each is there once"))
 
@@ -324,6 +329,10 @@ def _cell(column: pd.Series, row: int) -> str:
     """A cell as it is written."""
     value = column.iloc[row]
     return repr(value) if isinstance(value, str) else str(value)
+
+
+def _steps(first: int, last: int) -> str:
+    return f"step {first}" if first == last else f"steps {first} to {last:,}"
 
 
 def _absent_steps(steps: int, stated: int) -> str:

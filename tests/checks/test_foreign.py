@@ -182,12 +182,31 @@ def test_a_missing_path_column_is_asked_for(frame):
         validate(frame.rename(columns={"path": "run"}), SPEC)
 
 
-def test_missing_rows_are_named_once_and_a_window_as_a_window(frame):
+def test_missing_rows_are_named_once(frame):
     notes = [r.note for r in validate(frame.drop(index=[65]), SPEC).rows if r.outcome == "departs"]
     assert notes == ["1 row is missing, the first path 1, step 5"]
-    notes = [r.note for r in validate(frame[frame["step"] >= 20], SPEC).rows if r.kind == "structure"]
-    assert any("a window that starts at step 20" in note for note in notes)
-    assert not any("not finite" in note for note in notes)
+
+
+def test_a_window_that_begins_later_cannot_be_judged(frame):
+    """It departs from nothing: of no value that is there is anything wrong."""
+    late = (
+        "the table cannot be judged as it is: expected steps from 0 on, got steps 20 to 59; a spec states its values from "
+        "step 0 on, so give steps 0 to 19 too; where the spec states the same of every step, numbers from 0 will do"
+    )
+    with pytest.raises(TableError) as error:
+        validate(frame[frame["step"] >= 20], SPEC)
+    assert str(error.value) == late
+    one = r"got steps 1 to 58 \(if its steps count from 1, number them from 0\); .*, so give step 0 too;"
+    with pytest.raises(TableError, match=one):
+        validate(frame[(frame["step"] >= 1) & (frame["step"] < 59)], SPEC)
+    with pytest.raises(TableError, match="got steps 20 to 59"):
+        timed = frame.assign(time=pd.Timestamp("2027-01-04") + pd.to_timedelta(frame["step"], unit="h"))
+        hourly = read_spec({**SPEC.raw, "time": {"start": "2027-01-04T00:00", "every": "1h", "steps": 60}})
+        validate(timed[timed["step"] >= 20].drop(columns="step"), hourly)
+    from_zero = frame[frame["step"] >= 20].assign(step=lambda rows: rows["step"] - 20)
+    assert validate(from_zero, SPEC).agrees is not None
+    absent = frame[(frame["step"] >= 20) | (frame["path"] > 0)]  # of one path only: these rows are missing
+    assert validate(absent, SPEC).agrees is False
 
 
 @pytest.mark.parametrize(
