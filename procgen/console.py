@@ -12,6 +12,8 @@ from typing import Any, NoReturn
 
 import typer
 
+from procgen.ensemble.own import claim
+
 BAD_INPUT, INTERRUPTED, BROKEN_PIPE = 2, 130, 141
 Tick = Callable[[int, int], None]
 
@@ -40,6 +42,7 @@ def run(app: typer.Typer) -> NoReturn:
     The matrices here are small: threads of a linear algebra library only wait for each other, and much so beside
     other work. Being asked to end is taken as Ctrl-C is, so that a render stops between two parts.
     """
+    claim()
     for library in ("OPENBLAS", "OMP", "MKL"):
         os.environ.setdefault(f"{library}_NUM_THREADS", "1")
     signal.signal(signal.SIGTERM, signal.default_int_handler)

@@ -24,6 +24,7 @@ from types import FrameType
 from typing import Any, Protocol
 
 from procgen.ensemble.errors import EnsembleError, lacks_memory, system_sentence
+from procgen.ensemble.own import settled
 
 Progress = Callable[[int, int], None]  # (rows done so far, rows in all)
 Records = list[dict[str, Any]]
@@ -176,6 +177,7 @@ def _work(crew: Crew, work: str, helping: int, inherit: int | None, advice: str)
         for _ in range(helping):
             helpers.append(Helper(crew, work, inherit, advice))
         do = function(work)
+        settled()
         while (task := crew.next()) is not None:
             crew.keep(do(task, crew.tick))
         while crew.error is None and any(helper.is_alive() for helper in helpers):

@@ -11,6 +11,8 @@ from queue import SimpleQueue
 from types import FrameType
 from typing import Any
 
+from procgen.ensemble.own import claim, settled
+
 
 class Worker:
     """Works on tasks until standard input ends; when that is because the parent died, it ends at once."""
@@ -50,6 +52,7 @@ class Worker:
             from procgen.ensemble.engines import function
 
             self._say(records=function(work)(task, self._tick))
+            settled()
         except EnsembleError as error:
             self._say(error=str(error))
         except Exception as error:
@@ -74,6 +77,7 @@ class Worker:
 
 def main() -> None:
     """Be a worker of the process that holds the other end of standard input and output."""
+    claim()
     worker = Worker()
     signal.signal(signal.SIGTERM, worker.stop)
     worker.work()
