@@ -250,9 +250,9 @@ class Table:
         if first > 0:
             one = " (if its steps count from 1, number them from 0)" if first == 1 else ""
             raise TableError(
-                f"{self.where} cannot be judged as it is: expected steps from 0 on, got {_steps(first, last)}{one}; a spec "
-                f"states its values from step 0 on, so give {_steps(0, first - 1)} too; where the spec states the same of "
-                f"every step, numbers from 0 will do"
+                f"{self.where} cannot be judged as it is: expected steps from 0 on, got {_steps(first, last)}{one}; "
+                f"a spec states its values from step 0 on, so give {_steps(0, first - 1)} too; where the spec states "
+                f"the same of every step, numbers from 0 will do"
             )
 
     def _place(self, path: NDArray, step: NDArray) -> None:

@@ -190,8 +190,9 @@ def test_missing_rows_are_named_once(frame):
 def test_a_window_that_begins_later_cannot_be_judged(frame):
     """It departs from nothing: of no value that is there is anything wrong."""
     late = (
-        "the table cannot be judged as it is: expected steps from 0 on, got steps 20 to 59; a spec states its values from "
-        "step 0 on, so give steps 0 to 19 too; where the spec states the same of every step, numbers from 0 will do"
+        "the table cannot be judged as it is: expected steps from 0 on, got steps 20 to 59; a spec states its values "
+        "from step 0 on, so give steps 0 to 19 too; where the spec states the same of every step, numbers from 0 "
+        "will do"
     )
     with pytest.raises(TableError) as error:
         validate(frame[frame["step"] >= 20], SPEC)
