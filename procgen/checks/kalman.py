@@ -2,7 +2,8 @@
 
 For s[t+1] = A s[t] + B e[t], y[t] = mean[t] + C s[t] (+ rounding noise) the one-step prediction errors divided by
 their standard deviations are independent standard normals if and only if the series is the one stated
-(Kalman 1960; Schweppe 1965). The gains do not depend on the values, so steps are taken in chunks by matrix products.
+(Kalman 1960; Schweppe 1965). The gains do not depend on the values, so steps are taken in chunks: one by one on rows
+of paths where the state is small (`small`), by matrix products where it is not.
 """
 
 from __future__ import annotations
@@ -12,9 +13,10 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
-from procgen.checks.blocks import GROUP
+from procgen.checks.blocks import BLOCK, GROUP
+from procgen.checks.small import MOST, Steps, products
 
-_CHUNK = 32  # steps taken at once, from a multiple of it on
+_CHUNK = 32  # steps taken at once by matrix products, from a multiple of it on
 _KEPT = 16 << 20  # bytes of chunks that are kept
 _SETTLED = 1e-13  # relative change of the gain that counts as none
 _LONGEST = 65_536  # the gain is taken as settled after this many steps at the latest
@@ -47,34 +49,48 @@ class Kalman:
 
     def __post_init__(self) -> None:
         self._p = np.array(self.p0, dtype=float)
-        self._chunks: dict[tuple[int, int], Chunk] = {}
-        self._bytes = 8 * (_CHUNK + len(self.c)) ** 2
+        self._chunks: dict[tuple[int, int], Chunk | Steps] = {}
+        # an element without a past has no gain either: it stays at its mean
+        self._moves = np.flatnonzero(self.a.any(axis=1))
+        self._a, self._c = self.a[np.ix_(self._moves, self._moves)], self.c[self._moves]
+        self._small = products(self._a, self._c) <= MOST
+        self._bytes = 8 * (_CHUNK + len(self._c)) ** 2
         self._scale = float(np.max(np.abs(np.diag(self._p + self.q)))) or 1.0
 
     def start(self, paths: int) -> NDArray:
-        """The predicted state (d, paths) before step 0."""
-        return np.zeros((len(self.c), paths))
+        """The predicted state before step 0: a row for each element that moves."""
+        return np.zeros((len(self._c), paths))
 
     def prepare(self, most: int = 4096) -> int:
         """Compute the gains ahead; returns the step at which they have settled, at most `most`."""
         self._extend(most - 1)
         return min(len(self.gains), most)
 
-    def innovations(self, y: NDArray, state: NDArray, step: int) -> tuple[NDArray, NDArray]:
-        """Standardised innovations (steps, paths) of the deviations `y` from the mean, and the state after them.
+    def innovations(
+        self, y: NDArray, state: NDArray, step: int, mean: NDArray | None = None
+    ) -> tuple[NDArray, NDArray]:
+        """Standardised innovations (steps, paths) of the values `y` about their mean (steps,), and the state after.
 
         `state` is the prediction for `step`, the first row of `y`. Rows that the theory calls constant are NaN.
         """
+        mean = np.zeros(len(y)) if mean is None else mean
         if not self.a.any():
-            return self._without_memory(y, step), state
-        out, t = np.empty_like(y), 0
+            return self._without_memory(y - mean[:, None], step), state
+        small = self._small and y.shape[1] % GROUP == 0
+        size = BLOCK if small else _CHUNK
+        y = y if small else y - mean[:, None]
+        out, t = np.empty(y.shape), 0
         while t < len(y):
             at, left = step + t, len(y) - t
-            self._extend(at + min(left, _CHUNK) - 1)
-            count = min(_CHUNK - at % _CHUNK, left)
-            if count == _CHUNK and self.settled is not None and at >= self.settled:
-                count = left - left % _CHUNK
-            state = self._take(self._chunk(at, min(count, _CHUNK)), y[t : t + count], state, out[t : t + count])
+            self._extend(at + min(left, size) - 1)
+            count = min(size - at % size, left)
+            if count == size and self.settled is not None and at >= self.settled:
+                count = left - left % size
+            chunk, rows = self._chunk(at, min(count, size), small), slice(t, t + count)
+            if isinstance(chunk, Steps):
+                state = chunk.take(y[rows], mean[rows], state, out[rows])
+            else:
+                state = self._take(chunk, y[rows], state, out[rows])
             t += count
         return out, state
 
@@ -83,7 +99,8 @@ class Kalman:
         self._extend(step + len(y) - 1)
         roots = np.array(self.roots[step : step + len(y)])
         roots = np.append(roots, np.full(len(y) - len(roots), self.roots[-1]))
-        return y * (1.0 / np.where(roots > 0, roots, np.nan))[:, None]
+        y *= (1.0 / np.where(roots > 0, roots, np.nan))[:, None]
+        return y
 
     def _take(self, chunk: Chunk, y: NDArray, state: NDArray, out: NDArray) -> NDArray:
         """Innovations of rows that are a whole number of chunks; the state after them."""
@@ -106,16 +123,18 @@ class Kalman:
         out.reshape(-1, size, paths // GROUP, GROUP)[...] = z.transpose(0, 2, 1, 3)
         return groups.transpose(1, 0, 2).reshape(state.shape)
 
-    def _chunk(self, first: int, count: int) -> Chunk:
+    def _chunk(self, first: int, count: int, small: bool) -> Chunk | Steps:
         """The chunk of `count` steps from `first` on; those after the gain has settled are all the same."""
         if self.settled is not None and first >= self.settled:
             first = self.settled
-        if (first, count) not in self._chunks:
+        key = (first, count if small else -count)
+        if key not in self._chunks:
             while len(self._chunks) * self._bytes > _KEPT:
                 del self._chunks[next(iter(self._chunks))]
             at = [min(first + i, len(self.gains) - 1) for i in range(count)]
-            self._chunks[first, count] = Chunk(self.a, self.c, [self.gains[k] for k in at], [self.roots[k] for k in at])
-        return self._chunks[first, count]
+            gains, roots = [self.gains[k][self._moves] for k in at], [self.roots[k] for k in at]
+            self._chunks[key] = (Steps if small else Chunk)(self._a, self._c, gains, roots)
+        return self._chunks[key]
 
     def _extend(self, step: int) -> None:
         """Gains up to `step`, until they settle."""

@@ -83,7 +83,7 @@ class Route:
         if self.grain:
             x = x + self.grain * self._dither(x, first_path, first_step)
         if self.kalman is not None:
-            return self.kalman.innovations(x - self._mean(first_step, len(x)), carrier, first_step)
+            return self.kalman.innovations(x, carrier, first_step, self._mean(first_step, len(x)))
         if carrier is not None:
             with np.errstate(all="ignore"):
                 z = carrier.tile(x)
@@ -112,8 +112,10 @@ class Route:
         from procgen.terms.by_path import run as run_of
 
         run, carrier, step = run_of(self.graph, 0, 1), self.start(0, 1), 0
+        ends = [node.term.longest for node in self.graph.order() if getattr(node, "term", None)]
+        most = min([most, *(end for end in ends if end is not None)])  # no more can be drawn of some
         while step < most and carrier is not None:
-            z, carrier = self.tile(run.tile(256)[self.series], carrier, 0, step)
+            z, carrier = self.tile(run.tile(min(256, most - step))[self.series], carrier, 0, step)
             known = np.isfinite(z[:, 0])
             if known.any():
                 return step + int(np.argmax(known)) + 1
@@ -123,7 +125,7 @@ class Route:
     def _mean(self, first: int, steps: int) -> NDArray:
         key = (first, steps)
         if key not in self._means:
-            self._means[key] = np.asarray(self.theory.mean(np.arange(first, first + steps)))[:, None]
+            self._means[key] = np.asarray(self.theory.mean(np.arange(first, first + steps)), float)
             if len(self._means) > _CACHED:
                 self._means.popitem(last=False)
         return self._means[key]

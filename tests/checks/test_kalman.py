@@ -4,6 +4,7 @@ import numpy as np
 import pytest
 import statsmodels.api as sm
 
+from procgen.chance import kernel
 from procgen.checks.kalman import Kalman
 
 
@@ -89,3 +90,58 @@ def test_rounding_is_part_of_the_model():
     spread = [(k.innovations(y, k.start(2000), 0)[0] ** 2).mean() - 1 for k in (plain, aware)]
     assert spread[0] * np.sqrt(5e5) > 15
     assert abs(spread[1]) * np.sqrt(5e5) < 5.5
+
+
+def ar_two():
+    """A second-order autoregression: two elements that feed each other."""
+    return Kalman(np.array([[0.75, -0.5], [1.0, 0.0]]), np.diag([1.0, 0.0]), np.array([1.0, 0.0]), 2 * np.eye(2))
+
+
+def six():
+    """Six elements in all directions: too many products for steps one by one."""
+    a = 0.1 * np.ones((6, 6)) + 0.2 * np.eye(6)
+    return Kalman(a, np.eye(6), np.ones(6), np.eye(6))
+
+
+MAKES = {make.__name__: make for make in (level_and_ar, nearly_unit_ma, ar_two, six)}
+
+
+@pytest.mark.skipif(not kernel.available(), reason="numba is not installed")
+@pytest.mark.parametrize("name", MAKES)
+@pytest.mark.parametrize("mean", [None, 3.25])
+def test_the_same_bits_whatever_the_tiles_and_compiled(name, mean):
+    """Tiles that begin at multiples of 64, lanes of one group and of many, a gap: no bit of it shows."""
+    y = np.random.default_rng(6).standard_normal((400, 96))
+    y[130, 40] = np.nan
+    level = np.zeros(400) if mean is None else mean + np.arange(400.0)
+
+    def run(cuts, lanes, compile):
+        kalman, out = MAKES[name](), np.empty(y.shape)
+        with kernel.compiling(compile):
+            for first, end in lanes:
+                state = kalman.start(end - first)
+                for here in np.split(np.arange(400), cuts):
+                    rows = slice(here[0], here[-1] + 1)
+                    given = None if mean is None else level[rows]
+                    out[rows, first:end], state = kalman.innovations(y[rows, first:end], state, here[0], given)
+        return out
+
+    whole = run([], [(0, 96)], False)
+    assert np.isfinite(whole[:130, 40]).sum() >= 96
+    assert np.isnan(whole[130:, 40]).all()
+    assert np.isfinite(np.delete(whole, 40, axis=1)).all()
+    narrow = [(first, first + 16) for first in range(0, 96, 16)]
+    for cuts in ([], [64], [128, 192, 320]):
+        for lanes in ([(0, 96)], [(0, 32), (32, 96)], narrow):
+            for compile in (False, True):
+                np.testing.assert_array_equal(run(cuts, lanes, compile), whole, strict=True)
+
+
+@pytest.mark.parametrize("name", MAKES)
+def test_steps_and_matrix_products_agree(name):
+    """Of 16 paths and of 15 the innovations are made in two ways."""
+    y = np.random.default_rng(7).standard_normal((300, 16))
+    kalman = MAKES[name]()
+    whole, _ = kalman.innovations(y, kalman.start(16), 0)
+    some, _ = kalman.innovations(y[:, :15], kalman.start(15), 0)
+    np.testing.assert_allclose(some, whole[:, :15], atol=1e-11)
