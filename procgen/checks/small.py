@@ -56,16 +56,16 @@ class Steps:
         count, d, paths = len(self.scales), len(self.c), y.shape[1]
         v = np.ascontiguousarray(y.reshape(-1, count, paths).transpose(1, 0, 2))
         room, z = np.empty(v.shape[1:]), np.empty(v.shape)
-        states = [np.zeros(room.shape) for _ in range(d)]
+        states, seen = [np.zeros(room.shape) for _ in range(d)], -self.c
         for i in range(count):
-            _add(v[i], -self.c, states, room)
+            _add(v[i], seen, states, room)
             np.multiply(v[i], self.scales[i], out=z[i])
             new = [gain * v[i] for gain in self.gains[i]]
             for state, row in zip(new, self.a, strict=True):
                 _add(state, row, states, room)
             states = new
         starts, after = np.empty((d, *room.shape)), np.stack(states)
-        for k in range(room.shape[0]):
+        for k in range(v.shape[1]):
             starts[:, k], now = start, start
             start = after[:, k]
             for j in range(d):
