@@ -49,10 +49,12 @@ class Kalman:
 
     def __post_init__(self) -> None:
         self._p = np.array(self.p0, dtype=float)
+        self._still = 0  # steps in a row that have moved no gain
         self._chunks: dict[tuple[int, int], Chunk | Steps] = {}
         # an element without a past has no gain either: it stays at its mean
         self._moves = np.flatnonzero(self.a.any(axis=1))
         self._a, self._c = self.a[np.ix_(self._moves, self._moves)], self.c[self._moves]
+        self._memory = max(len(self._c), 1)
         self._small = products(self._a, self._c) <= MOST
         self._bytes = 8 * (_CHUNK + len(self._c)) ** 2
         self._scale = float(np.max(np.abs(np.diag(self._p + self.q)))) or 1.0
@@ -158,7 +160,9 @@ class Kalman:
             return False
         new, old = self.gains[-1], self.gains[-2]
         close = np.max(np.abs(new - old)) <= _SETTLED * max(float(np.max(np.abs(new))), 1e-300)
-        return bool(close) and abs(self.roots[-1] - self.roots[-2]) <= _SETTLED * self.roots[-1]
+        still = bool(close) and abs(self.roots[-1] - self.roots[-2]) <= _SETTLED * self.roots[-1]
+        self._still = self._still + 1 if still else 0
+        return self._still >= self._memory  # gains of a season may move once a season only
 
 
 class Chunk:

@@ -32,14 +32,26 @@ def nearly_unit_ma():
     return Kalman(a, np.diag([1.0, 0.0]), np.array([1.0, 1.0]), np.eye(2))
 
 
-@pytest.mark.parametrize("make", [level_and_ar, nearly_unit_ma])
+def seasonal_difference():
+    """e[t] − e[t−4]: its gain moves once in four steps."""
+    return Kalman(np.eye(5, k=-1), np.diag([1.0, 0, 0, 0, 0]), np.array([1.0, 0, 0, 0, -1]), np.eye(5))
+
+
+def seasonal_walk():
+    """A pattern of four that drifts, known at first, and noise beside it."""
+    a = np.zeros((5, 5))
+    a[0, 3] = a[1, 0] = a[2, 1] = a[3, 2] = 1.0
+    return Kalman(a, np.diag([0.09, 0, 0, 0, 1]), np.array([1.0, 0, 0, 0, 1]), np.diag([0.0, 0, 0, 0, 1]))
+
+
+@pytest.mark.parametrize("make", [level_and_ar, nearly_unit_ma, seasonal_difference, seasonal_walk])
 def test_innovations_equal_those_of_statsmodels(make):
     kalman = make()
-    y = drawn(kalman, 300, 2, 1)
+    y, size = drawn(kalman, 300, 2, 1), len(kalman.c)
     model = sm.tsa.statespace.MLEModel(
-        y[:, 0], k_states=2, initialization="known", initial_state=np.zeros(2), initial_state_cov=kalman.p0
+        y[:, 0], k_states=size, initialization="known", initial_state=np.zeros(size), initial_state_cov=kalman.p0
     )
-    model["transition"], model["selection"], model["state_cov"] = kalman.a, np.eye(2), kalman.q
+    model["transition"], model["selection"], model["state_cov"] = kalman.a, np.eye(size), kalman.q
     model["design"], model["obs_cov"] = kalman.c[None, :], np.zeros((1, 1))
     model.ssm.tolerance = 0
     theirs = model.ssm.filter()
