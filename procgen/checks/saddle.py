@@ -24,6 +24,7 @@ _LAST = 7.5  # normal score of the outermost node: what lies beyond has a probab
 _NEAR = 1e-3  # this near to the middle the formula is 0/0, and its limit is taken
 _STEPS = 100
 _STEEPEST = 1e3
+_ROUNDING = 1e-12  # of the largest value: a law no wider than that has one value
 
 
 @dataclass(frozen=True, eq=False)
@@ -37,7 +38,9 @@ class Summand:
         w = self.weights / self.weights.sum()
         v = self.values - w @ self.values
         object.__setattr__(self, "weights", w)
-        object.__setattr__(self, "values", v / math.sqrt(float(w @ v**2)))
+        spread = math.sqrt(float(w @ v**2))
+        known = spread <= _ROUNDING * float(np.max(np.abs(self.values)))  # squares of what is 1 or -1 are one number
+        object.__setattr__(self, "values", 0.0 * v if known else v / spread)
 
     @cached_property
     def skew(self) -> float:

@@ -166,6 +166,7 @@ class Sigmoid(Elementwise):
     source = "Mehler (1866) for the covariance by Hermite series"
     example = "sigmoid: {of: [{ar: {phi: 0.9, total_sd: 1}}], low: 0, high: 100}"
     knows = "mean and covariance of a Gaussian or known body, to 1e-10 of its variance"
+    blurs = True
     parameters = (
         OF,
         Parameter("low", "l", Real(), "the level that it comes from", default=0.0, unit="series"),
@@ -212,6 +213,7 @@ class Logit(Elementwise):
     source = "Berkson (1944)"
     example = "logit: [{sigmoid: [{ar: {phi: 0.9, total_sd: 1}}]}]"
     knows = "values of a known body; no closed moments of a random one"
+    blurs = True
     parameters = Sigmoid.parameters
 
     @classmethod

@@ -17,7 +17,7 @@ from procgen.theory.known import Known
 from procgen.theory.lattice import Rounded
 from procgen.theory.laws import LOST, is_gaussian, marginal
 from procgen.theory.lumps import Bounded, Folded, Mapped
-from procgen.theory.processes import Curved, Hinged, Process
+from procgen.theory.processes import Curved, Hinged, Process, mean_at
 from procgen.theory.sources import Space
 from procgen.theory.unknown import Unknown
 from procgen.theory.verdict import judge
@@ -103,6 +103,8 @@ class Bending:
 
     def log_odds(self, x: Expression, f: Callable[[np.ndarray], np.ndarray], low: float, high: float) -> Expression:
         """f(x) for the f that undoes the S-curve between two levels."""
+        if not x.sources:
+            return self._of_known(x, f)
         made = self.opaque((x,), f"{self.name}: log odds of a random body have no closed moments")
 
         def law(of: Any) -> Mapped:
@@ -119,15 +121,19 @@ class Bending:
         self, x: Expression, f: Callable[[np.ndarray], np.ndarray], to: float, shift: float = 0.0
     ) -> Expression:
         """f(x), which is x + `shift` multiples of `to`, rounded to multiples of it: closed where x is Gaussian."""
-        return self._of_gaussian(x, f, Rounded(self.name, x + self.level(shift * to), to))
+        rounded = Rounded(self.name, x + self.level(shift * to), to, lambda steps: f(mean_at(x, steps)))
+        return self._of_gaussian(x, f, rounded)
+
+    def _of_known(self, x: Expression, f: Callable[[np.ndarray], np.ndarray]) -> Expression:
+        if x.mean_path.value is not None:
+            return Expression(self.space, known.constant(float(f(np.array(x.mean_path.value)))))
+        path, note = x.mean_path, "; ".join(x.mean_path.notes)
+        whole = known.whole(("of", self.name, path.key), lambda t: f(path.at(t)), path.periods, note)
+        return Expression(self.space, whole)
 
     def _of_gaussian(self, x: Expression, f: Callable[[np.ndarray], np.ndarray], process: Any) -> Expression:
         if not x.sources:
-            if x.mean_path.value is not None:
-                return Expression(self.space, known.constant(float(f(np.array(x.mean_path.value)))))
-            path, note = x.mean_path, "; ".join(x.mean_path.notes)
-            whole = known.whole(("of", self.name, path.key), lambda t: f(path.at(t)), path.periods, note)
-            return Expression(self.space, whole)
+            return self._of_known(x, f)
         if not is_gaussian(x):
             return self._given_up(x, "moments of a bend are not worked out for a body that is not Gaussian")
         steady = judge(x).covariance_stationary

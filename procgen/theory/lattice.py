@@ -8,6 +8,7 @@ bivariate density for each pair of borders (Plackett 1954), which is integrated.
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from functools import cache
 from typing import Any
 
@@ -28,13 +29,16 @@ NARROWEST = 1e-9
 
 
 class Rounded(Process):
-    """`to` times the nearest whole number to x / to, for a Gaussian x, less its mean."""
+    """`to` times the nearest whole number to x / to, for a Gaussian x, less its mean.
+
+    known: what x is rounded to at steps at which it is known, for one on a border goes up or down by the term's rule.
+    """
 
     lumpy = True
 
-    def __init__(self, name: str, body: Any, to: float):
+    def __init__(self, name: str, body: Any, to: float, known: Callable[[Steps], np.ndarray]):
         super().__init__(name, (body,))
-        self.body, self.to = body, float(to)
+        self.body, self.to, self.known = body, float(to), known
 
     def shape(self, steps: Steps) -> tuple[np.ndarray, np.ndarray]:
         """Mean and standard deviation of x, in multiples of `to`."""
@@ -46,7 +50,8 @@ class Rounded(Process):
         steps = np.asarray(steps, np.int64)
         m, sd = self.shape(steps)
         coarse = np.rint(m) + _below(m, sd)
-        return self.to * np.where(sd < 1.0, coarse, m + _error(m, np.maximum(sd, 1.0)))
+        spread = self.to * np.where(sd < 1.0, coarse, m + _error(m, np.maximum(sd, 1.0)))
+        return np.where(sd > 0.0, spread, self.known(steps)) if np.any(sd <= 0.0) else spread
 
     def covariance(self, t, s):
         return self.crossed(self, t, s)
