@@ -22,7 +22,7 @@ LARGEST_STATE = 300  # elements of the state up to which a Kalman filter is run
 SMALL_STATE = 64  # up to here it is preferred to undoing: it also knows how the series starts
 COARSE = 0.5  # rounding beyond this share of the shock's standard deviation hides the shock
 SPAN = 50  # lags over which correlations between two series' shocks are followed
-_CACHED = 256
+_CACHED = 1 << 18  # means of steps that are kept
 FEW = ("among the law's values", "are none of the values of the stated law", "every shock is one of them")
 _BEYOND = 10.0  # no rounding moves a shock by more than this many times its own standard deviation
 
@@ -125,9 +125,9 @@ class Route:
     def _mean(self, first: int, steps: int) -> NDArray:
         key = (first, steps)
         if key not in self._means:
-            self._means[key] = np.asarray(self.theory.mean(np.arange(first, first + steps)), float)
-            if len(self._means) > _CACHED:
+            if len(self._means) * steps >= _CACHED:
                 self._means.popitem(last=False)
+            self._means[key] = np.asarray(self.theory.mean(np.arange(first, first + steps)), float)
         return self._means[key]
 
 
