@@ -41,28 +41,28 @@ class Reach:
         self._chunks: dict[int, tuple[NDArray, NDArray]] = {}
         self._kurtosis: dict[int, float | None] = {}
 
-    def farthest(
+    def look(
         self,
         x: NDArray,
         first_path: int,
         first_step: int,
-        known: Sequence[Far],
+        known: list[Far],
         ends: tuple[NDArray, NDArray] | None = None,
         least: float = 0.0,
-    ) -> list[Far]:
+    ) -> tuple[list[Far], tuple[int, int]]:
         """The KEPT farthest of those known and the values of a tile (steps, paths); what is not finite is left out.
 
-        `ends` (steps,): the least and the largest value of each step, where they are known; of sizes below `least`
-        none is wanted.
+        Also how many of its values are outside of what n values reach, and how many are absurd. `ends` (steps,): the
+        least and the largest value of each step, where they are known; of sizes below `least` none is wanted.
         """
         mean, sd = self._at(first_step, len(x))
         with np.errstate(invalid="ignore", divide="ignore", over="ignore"):
             low, high = ends or (np.fmin.reduce(x, axis=1), np.fmax.reduce(x, axis=1))
             worst = np.maximum(high - mean, mean - low) / sd
             least = max(_LEAST, least, known[-1][0] if len(known) == KEPT else 0.0)
-            rows = np.flatnonzero(worst >= least)
+            rows = np.flatnonzero(worst >= min(least, self._allowed))
             if not rows.size:
-                return list(known)
+                return known, (0, 0)
             sizes = np.minimum(np.abs(x[rows] - mean[rows, None]) / sd[rows, None], _FARTHEST)
         sizes[~np.isfinite(x[rows])] = 0.0
         found = list(known)
@@ -70,19 +70,8 @@ class Reach:
             row = int(rows[at])
             place = -first_path - path, -first_step - row
             found.append([float(sizes[at, path]), *place, float(x[row, path]), float(mean[row]), float(sd[row])])
-        return merged(found)
-
-    def beyond(self, x: NDArray, first_step: int, ends: tuple[NDArray, NDArray] | None = None) -> list[int]:
-        """How many values of a tile are outside of what n values reach, and how many are absurd; `ends` as above."""
-        mean, sd = self._at(first_step, len(x))
-        with np.errstate(invalid="ignore", divide="ignore", over="ignore"):
-            low, high = ends or (np.fmin.reduce(x, axis=1), np.fmax.reduce(x, axis=1))
-            rows = np.flatnonzero(np.maximum(high - mean, mean - low) > self._allowed * sd)
-            if not rows.size:
-                return [0, 0]
-            sizes = np.abs(x[rows] - mean[rows, None]) / sd[rows, None]
-        sizes[~np.isfinite(x[rows])] = 0.0
-        return [int(np.count_nonzero(sizes > times * self._allowed)) for times in (1.0, _ABSURD)]
+        outside, absurd = (int(np.count_nonzero(sizes > times * self._allowed)) for times in (1.0, _ABSURD))
+        return merged(found), (outside, absurd)
 
     @cached_property
     def _allowed(self) -> float:
@@ -93,6 +82,8 @@ class Reach:
 
     def _at(self, first: int, count: int) -> tuple[NDArray, NDArray]:
         chunks = [self._chunk(k) for k in range(first // self.size, (first + count - 1) // self.size + 1)]
+        if len(chunks) == 1:
+            return chunks[0][0][first % self.size :][:count], chunks[0][1][first % self.size :][:count]
         cut = slice(first % self.size, first % self.size + count)
         mean, sd = (np.concatenate(parts)[cut] for parts in zip(*chunks, strict=True))
         return mean, sd

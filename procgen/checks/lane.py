@@ -95,7 +95,8 @@ class Lane:
     def _series(self, column: int, x: NDArray) -> NDArray:
         """Add a tile of one series; the tile as it goes into sums."""
         plan, sums = self.plan.series[column], self.sums
-        if not sums.structure.absorb(column, x, self.first_path, self.step, self.prints[column]):
+        ends = sums.structure.absorb(column, x, self.first_path, self.step, self.prints[column])
+        if ends is None:
             x = np.where(np.isfinite(x), x, np.nan)  # named there; from here on the path is left out
         if column in self.watches:
             self.watches[column].absorb(x)
@@ -104,7 +105,7 @@ class Lane:
             self.held[column] = x[-1:].copy()
         if not self.plan.precision[column].random:
             self._compare(plan, x)
-        if not (x.max() <= plan.limit and x.min() >= -plan.limit):
+        if ends is None or ends[0].min() < -plan.limit or ends[1].max() > plan.limit:
             x = np.clip(x, -plan.limit, plan.limit)
         for i in np.flatnonzero((plan.steps >= self.step) & (plan.steps < self.step + len(x))):
             self.probes[:, self.plan.offset[column] + i] = x[plan.steps[i] - self.step]

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Container, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -14,6 +15,7 @@ from procgen.checks.blocks import compiled, in_one_pass
 from procgen.checks.verdict import Check
 from procgen.checks.words import many, number
 
+_SHORT = 1024  # steps of a tile whose weights are kept
 _AT_ONCE = 1 << 14  # values of a fingerprint: what is computed on the way stays in the cache
 _SAMPLE = 61  # every so manieth step's bits are looked at for a detour through float32; at least 32 steps
 _SPACING = {"float32": 2.0**-24 + 4e-16}  # how far, of its size, a stored decimal number may lie from itself
@@ -63,16 +65,21 @@ class Structure:
     least: dict[str, float] = field(default_factory=dict)  # series -> below it no value is one of the farthest of all
     _samples: dict[str, list[NDArray]] = field(default_factory=dict, repr=False)  # not looked at so far
 
-    def absorb(self, column: int, x: NDArray, first_path: int, first_step: int, prints: NDArray[np.uint64]) -> bool:
-        """Look at a tile (steps, paths) of one series; `prints` (paths,) is updated. True when all is finite."""
+    def absorb(
+        self, column: int, x: NDArray, first_path: int, first_step: int, prints: NDArray[np.uint64]
+    ) -> tuple[NDArray, NDArray] | None:
+        """Look at a tile (steps, paths) of one series; `prints` (paths,) is updated.
+
+        The least and the largest value of each step, None where not all is finite.
+        """
         what = self.series[column]
-        finite, ends, zeros = _looked(x, first_step, prints)
+        ends, zeros = _looked(x, first_step, prints)
         begun = max(copies.BEGUN - first_step, 0)
-        if zeros[begun:].any() and what.repeats is not None:
+        if what.repeats is not None and zeros[begun:].any():
             here = x == 0.0
             here[:begun] = False
             _note(self.zeros, what.name, here, first_path, first_step)
-        wrong = None if finite else np.isinf(x) if what.gaps else ~np.isfinite(x)
+        wrong = None if ends is not None else np.isinf(x) if what.gaps else ~np.isfinite(x)
         if wrong is not None and wrong.any():
             _note(self.not_finite, what.name, wrong, first_path, first_step)
         if what.decimals is not None and abs(what.decimals) <= 15:
@@ -88,14 +95,13 @@ class Structure:
             if sum(part.size for part in self._samples[what.name]) >= _AT_ONCE:
                 self._look_closer(what.name)
         if what.reach is not None:
-            known, least = self.far.get(what.name, ()), self.least.get(what.name, 0.0)
-            self.far[what.name] = what.reach.farthest(x, first_path, first_step, known, ends, least)
-            more = what.reach.beyond(x, first_step, ends)
+            known, least = self.far.get(what.name, []), self.least.get(what.name, 0.0)
+            self.far[what.name], more = what.reach.look(x, first_path, first_step, known, ends, least)
             self.beyond[what.name] = [a + b for a, b in zip(self.beyond.get(what.name, (0, 0)), more, strict=True)]
         outside = what.possible.outside(x)
         if outside is not None:
             support.note(self.outside, what.name, outside, x, first_path, first_step)
-        return finite
+        return ends
 
     def _look_closer(self, name: str) -> None:
         """Count what the sampled values of a series that wait for it might be rounded to."""
@@ -338,17 +344,17 @@ def _wider(a: Sequence[float] | None, b: Sequence[float]) -> list[float]:
 
 def _looked(
     x: NDArray, first_step: int, prints: NDArray[np.uint64]
-) -> tuple[bool, tuple[NDArray, NDArray] | None, NDArray]:
-    """Whether all values are finite, if so the extremes of each step, and its zeros; `prints` takes fingerprints."""
+) -> tuple[tuple[NDArray, NDArray] | None, NDArray]:
+    """The extremes of each step, None where not all is finite, and its zeros; `prints` takes fingerprints."""
     if compiled(x.shape[1]):
-        low, high, zeros = np.empty((3, len(x)), dtype=np.int64)
+        low, high, zeros = found = np.empty((3, len(x)), dtype=np.int64)
         in_one_pass("looked", np.ascontiguousarray(x), _weights(first_step, len(x)), prints, low, high, zeros)
-        ends = low.view(float), high.view(float)
+        low, high = found[:2].view(float)
     else:
         prints += fingerprint(x, first_step)
-        ends, zeros = (x.min(axis=1), x.max(axis=1)), np.count_nonzero(x == 0.0, axis=1)
-    finite = bool(np.isfinite(ends).all())
-    return finite, ends if finite else None, zeros
+        low, high, zeros = x.min(axis=1), x.max(axis=1), np.count_nonzero(x == 0.0, axis=1)
+    finite = np.isfinite(low).all() and np.isfinite(high).all()
+    return (low, high) if finite else None, zeros
 
 
 def fingerprint(x: NDArray, first_step: int) -> NDArray[np.uint64]:
@@ -367,8 +373,15 @@ def fingerprint(x: NDArray, first_step: int) -> NDArray[np.uint64]:
 
 def _weights(first_step: int, steps: int) -> NDArray[np.uint64]:
     """An odd number for each step, the same for all series."""
+    return _kept_weights(first_step, steps) if steps <= _SHORT else _made_weights(first_step, steps)
+
+
+def _made_weights(first_step: int, steps: int) -> NDArray[np.uint64]:
     step = np.arange(first_step, first_step + steps, dtype=np.uint64)
     x = step * np.uint64(0x9E3779B97F4A7C15) + np.uint64(0x632BE59BD9B4E019)
     x = (x ^ (x >> np.uint64(30))) * np.uint64(0xBF58476D1CE4E5B9)
     x = (x ^ (x >> np.uint64(27))) * np.uint64(0x94D049BB133111EB)
     return (x ^ (x >> np.uint64(31))) | np.uint64(1)
+
+
+_kept_weights = lru_cache(256)(_made_weights)  # each range of paths, and each series, has tiles of the same steps

@@ -59,7 +59,7 @@ def test_true_values_are_flagged_no_more_often_than_stated():
     x, reach = 3.0 + 2.0 * np.random.default_rng(5).standard_normal((50, 2000 * 20)), Reach(Normal(), 0.0)
     p = []
     for rows in np.split(x, 2000, axis=1):
-        p += [check.p for check in checks("x", reach, reach.farthest(rows, 0, 0, ()), rows.size)]
+        p += [check.p for check in checks("x", reach, reach.look(rows, 0, 0, [])[0], rows.size)]
     # Bonferroni over 1,000 values is all but exact here: 100 expected, sd 10, hence beyond 150 once in 2e6 seeds.
     assert 60 < np.count_nonzero(np.array(p) <= 0.05) < 150
 
@@ -72,7 +72,7 @@ def test_the_farthest_are_the_same_however_the_data_are_cut(width):
     for paths in np.split(np.arange(40), [11, 30]):
         mine = []
         for step in range(0, 640, width):
-            mine = reach.farthest(x[step : step + width, paths], int(paths[0]), step, mine)
+            mine = reach.look(x[step : step + width, paths], int(paths[0]), step, mine)[0]
         found = merged([*found, *json.loads(json.dumps(mine))])
     sizes = np.nan_to_num(np.abs(x - 3.0) / 2.0)
     order = np.argsort(-sizes, axis=None)[:KEPT]
