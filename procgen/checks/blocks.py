@@ -47,9 +47,9 @@ def compiled(paths: int) -> bool:
     return is_compiling() and paths >= WIDE
 
 
-def in_one_pass(name: str, *args: Any) -> None:
-    """Call a function of `fused`, by its name: machine code that fills arrays."""
-    machine("fused", name, __package__)(*args)
+def in_one_pass(name: str, *args: Any, module: str = "fused") -> None:
+    """Call a function of `fused`, or of another such module, by its name: machine code that fills arrays."""
+    machine(module, name, __package__)(*args)
 
 
 def across(x: NDArray) -> NDArray:

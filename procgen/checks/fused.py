@@ -13,71 +13,36 @@ import numpy as np
 
 from procgen.chance.kernel import compiled_function
 
-BLOCK, STRETCH = 64, 16  # steps, as in `blocks` and `stretches`
+BLOCK = 64  # steps, as in `blocks`
 SOME = 64  # paths whose marks are looked for at once
 _SIZE = np.int64(2**63 - 1)  # all bits of a double but its sign
 _STEEP, _FALL = 6 * np.sqrt(5.0), 0.5 * np.sqrt(5.0)  # of `cluster_scores`
 _part = partial(compiled_function, inline="always")
 
 
-def scored(g, left, scale, counts, clusters, worst, u):
+def scored(g, table, scale, counts, clusters, worst):
     """Of scores g: their uniforms, counted in bins; cluster scores; and the size of the farthest of each step.
 
-    left: the table of uniforms and its last entry again; scale: cells for one sd; u: room for a row.
+    table, scale: of `uniforms.pieces`.
     """
     steps, paths = g.shape
-    cells, bins = float(left.shape[0] - 2), counts.shape[0]
+    cells, bins = float(table.shape[0] // 3 - 1), counts.shape[0]
     for t in range(steps):
         row, out, bits = g[t], clusters[t], g[t].view(np.int64)
         far = np.int64(0)
         for p in range(paths):
-            u[p] = min(max(row[p] * scale + 0.5 * cells, 0.0), cells)
+            out[p] = min(max(row[p] * scale + 0.5 * cells, 0.0), cells)
         for p in range(paths):  # one by one: processors fetch from tables no faster in vectors
-            whole = np.int64(u[p])
-            cell = np.uint64(whole)
-            low = left[cell]
-            u[p] = low + (left[cell + np.uint64(1)] - low) * (u[p] - whole)
-            counts[np.uint64(min(np.int64(u[p] * bins), bins - 1))] += 1
+            whole = np.int64(out[p])
+            at, part = np.uint64(3 * whole), out[p] - whole
+            u = table[at] + part * (table[at + np.uint64(1)] + (part - 1.0) * table[at + np.uint64(2)])
+            counts[np.uint64(min(np.int64(u * bins), bins - 1))] += 1
+            out[p] = u
         for p in range(paths):
-            v = u[p] - 0.5
+            v = out[p] - 0.5
             out[p] = v * v * _STEEP - _FALL
             far = max(far, bits[p] & _SIZE)
         worst[t] = far
-
-
-def summed(g, clusters, steps, lags, cluster_lags, totals, beside, profile, short, block, rest):
-    """Add products along paths and across them to totals, beside; fill sums by step and by stretch of 16 steps.
-
-    g, clusters (held + steps, paths): views of windows. totals: of g, g², two that are left alone, asymmetry, another
-    such, then by lag. block, rest: room for one row and for two.
-    """
-    held, held_too, paths = g.shape[0] - steps, clusters.shape[0] - steps, g.shape[1]
-    for first in range(0, steps, BLOCK):
-        end = min(first + BLOCK, steps)
-        _add(totals[0], g[held + first : held + end], block)
-        _add_products(totals[1], g, held, g, held, first, end, block)
-        _add_products(totals[4], clusters, held_too, g, held - 1, first, end, block)
-        for k in range(lags.shape[0]):
-            _add_products(totals[6 + k], g, held, g, held - lags[k], first, end, block)
-        at = 6 + lags.shape[0]
-        for k in range(cluster_lags.shape[0]):
-            _add_products(totals[at + k], clusters, held_too, clusters, held_too - cluster_lags[k], first, end, block)
-        for p in range(paths - 1):
-            block[p] = 0.0
-        for t in range(held + first, held + end):
-            right, left = g[t][1:], g[t]
-            for p in range(paths - 1):
-                block[p] += right[p] * left[p]
-        for p in range(paths - 1):
-            beside[p] += block[p]
-    for t in range(steps):
-        row = g[held + t]
-        profile[0, t] = _across(row, rest)
-        for p in range(paths):
-            block[p] = row[p] * row[p]
-        profile[1, t] = _across(block, rest)
-    for k in range(short.shape[0]):
-        _halved(g[held + STRETCH * k : held + STRETCH * (k + 1)], short[k])
 
 
 def plain_sums(z, totals, block):
@@ -140,34 +105,6 @@ def _add_products(total, a, at, b, bt, first, end, block):
             block[p] += x[p] * y[p]
     for p in range(paths):
         total[p] += block[p]
-
-
-@_part
-def _across(row, rest):
-    """Sum over a row, neighbours first; `rest` has room for twice the row."""
-    n, at, x = row.shape[0], 0, row
-    while n > 1:
-        half = n // 2
-        y = rest[at : at + half + n % 2]
-        for i in range(half):
-            y[i] = x[2 * i] + x[2 * i + 1]
-        if n % 2:
-            y[half] = x[n - 1]
-        n, at, x = half + n % 2, at + half + n % 2, y
-    return x[0]
-
-
-@_part
-def _halved(rows, out):
-    """Sums of sixteen rows, neighbours first."""
-    for p in range(out.shape[0]):
-        out[p] = (
-            ((rows[0][p] + rows[1][p]) + (rows[2][p] + rows[3][p]))
-            + ((rows[4][p] + rows[5][p]) + (rows[6][p] + rows[7][p]))
-        ) + (
-            ((rows[8][p] + rows[9][p]) + (rows[10][p] + rows[11][p]))
-            + ((rows[12][p] + rows[13][p]) + (rows[14][p] + rows[15][p]))
-        )
 
 
 def looked(x, weights, prints, low, high, zeros):

@@ -29,10 +29,12 @@ from procgen.checks.blocks import (
 )
 from procgen.checks.scores import BINS, Scores, cluster_scores
 from procgen.checks.stretches import LENGTHS, StretchLane, StretchSums
-from procgen.checks.uniforms import CELLS_OF_SD, bin_counts, lefts, uniforms
+from procgen.checks.uniforms import CELLS_OF_SD, bin_counts, pieces, uniforms
 
 MEMORY_LAGS = (1, 2, 3, 4, 5, 6, 8, 12)
-CLUSTER_LAGS = (1, 2, 3, 5)
+CLUSTER_LAGS = (1, 2, 3, 5)  # `strips` has both written out
+STRIP = 32  # paths, and
+ROOM = (3040, 2760, 640, 1280, 640, 320)  # numbers to work in, as in `strips`
 PROFILE = 65_536  # longest profile over steps; longer series share its entries
 FIRST_LAG = 6  # before it are the sums by path that have no lag: of g, g², z, z², asymmetry, neighbours
 
@@ -47,6 +49,9 @@ class ShockLane:
         self.first_path = first_path
         self.scores, self.clusters = Window(max(lags), paths), Window(max(CLUSTER_LAGS), paths)
         self.totals = np.zeros((FIRST_LAG + len(lags) + len(CLUSTER_LAGS), paths))
+        memory, cluster = (len(each) for each in (MEMORY_LAGS, CLUSTER_LAGS))
+        after = FIRST_LAG + len(lags)  # the rows of the sums that `strips` makes; neighbours are not among them
+        self.places = np.array([0, 1, 0, 4, *range(FIRST_LAG, FIRST_LAG + memory), *range(after, after + cluster)])
         self.beside = np.zeros(max(paths - 1, 0))  # products with the left neighbour
         self.length = np.zeros(paths, dtype=np.int64)
         self.view = self.sizes = np.empty((0, paths))
@@ -155,29 +160,29 @@ class ShockSums:
         height = BLOCK if len(g) % BLOCK == 0 else len(g)  # steps that go as one row: of few paths one is short
         rows, clusters = g.reshape(len(g) // height, -1), np.empty(g.shape)
         worst = np.empty(len(rows), np.int64)
-        room = scratch(1, rows.shape[1], 1)[0]
-        in_one_pass("scored", rows, lefts(), CELLS_OF_SD, self.counts, clusters.reshape(rows.shape), worst, room)
+        in_one_pass("scored", rows, pieces(), CELLS_OF_SD, self.counts, clusters.reshape(rows.shape), worst)
         return clusters, np.repeat(worst.view(float), height)
 
     def _compiled(self, z: NDArray, g: NDArray, first_step: int, lane: ShockLane, x: NDArray) -> None:
-        """The same as the rest of `absorb`, where all shocks are known, in fewer passes."""
+        """The same as the rest of `absorb`, where all shocks are known, in one pass."""
         steps, paths = g.shape
-        lane.view, clusters = lane.scores.push(g), lane.clusters.room(steps)
-        lane.sizes = clusters
+        lane.view, lane.sizes = lane.scores.push(g), lane.clusters.room(steps)
         g = lane.view[len(lane.view) - steps :]
-        worst, sums = np.empty(steps, np.int64), np.empty((2, steps))
-        short, room = np.empty((steps // LENGTHS[0], paths)), (np.empty(paths), np.empty(2 * paths + BLOCK))
-        new = clusters[len(clusters) - steps :]
-        in_one_pass("scored", g, lefts(), CELLS_OF_SD, self.counts, new, worst, room[0])
-        both = np.array(self.lags), np.array(CLUSTER_LAGS)
-        in_one_pass("summed", lane.view, clusters, steps, *both, lane.totals, lane.beside, sums, short, *room)
+        worst, profile, short = np.empty(steps, np.int64), np.empty((2, steps)), np.empty((steps // LENGTHS[0], paths))
+        in_one_pass(
+            "strips", lane.view, lane.sizes, steps, pieces(), CELLS_OF_SD, self.counts, worst, lane.totals, lane.places,
+            lane.beside, profile, scratch(2 * BLOCK, -(-paths // STRIP), 1).reshape(2, BLOCK, -1), short, _room(),
+            module="strips",
+        )  # fmt: skip
+        for i, lag in enumerate(self.lags[len(MEMORY_LAGS) :], FIRST_LAG + len(MEMORY_LAGS)):
+            add_lagged(lane.totals[i], lane.view, lane.view, lag, steps)
         if not self.scores.gaussian:
-            in_one_pass("plain_sums", np.ascontiguousarray(z), lane.totals, room[0])
-        for row, lags, held in ((self.memory[0], self.lags, lane.view), (self.cluster[0], CLUSTER_LAGS, clusters)):
-            row += [paths * max(min(steps, len(held) - lag), 0) for lag in lags]
+            in_one_pass("plain_sums", np.ascontiguousarray(z), lane.totals, scratch(1, paths, 1)[0])
+        for row, lags, view in ((self.memory[0], self.lags, lane.view), (self.cluster[0], CLUSTER_LAGS, lane.sizes)):
+            row += [paths * max(min(steps, len(view) - lag), 0) for lag in lags]
         self.asymmetry[0] += paths * min(steps, len(lane.view) - 1)
-        self._add_profile(np.full(steps, float(paths)), sums, first_step)
-        self.rows.update({GROUP: steps * -(-paths // GROUP)})
+        self._add_profile(np.full(steps, float(paths)), profile, first_step)
+        self.rows[GROUP] += steps * -(-paths // GROUP)
         self.far = farthest.farthest(g, z, x, lane.first_path, first_step, self.far, worst.view(float), self.least)
         self.stretches.absorb(g, first_step, lane.stretches, short)
 
@@ -256,6 +261,11 @@ class ShockSums:
 
 
 SHOCK_ARRAYS = ("sums", "counts", "paths", "profile", "memory", "cluster", "asymmetry", "square", "stretched")
+
+
+def _room() -> tuple[NDArray, ...]:
+    """What `strips` works in: the same memory at each call of a thread."""
+    return tuple(scratch(1, size, 10 + k)[0] for k, size in enumerate(ROOM))
 
 
 def _add_in_turn(row: NDArray, values: NDArray, first: int, width: int) -> None:

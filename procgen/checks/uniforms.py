@@ -1,4 +1,4 @@
-"""From normal scores to uniforms by a table: four times as fast as the exact function, and as good for counting."""
+"""From normal scores to uniforms by a table: much faster than the exact function, and as good for counting."""
 
 from __future__ import annotations
 
@@ -10,31 +10,36 @@ from numpy.typing import NDArray
 from procgen.checks.blocks import scratch
 from procgen.checks.scores import BINS
 
-_REACH, _CELLS = 8.5, 1 << 16  # beyond 8.5 a uniform is 0 or 1 in double precision but for 1e-17
+_REACH, _CELLS = 8.5, 1 << 12  # beyond 8.5 a uniform is 0 or 1 in double precision but for 1e-17
 
 
 CELLS_OF_SD = _CELLS / (2 * _REACH)
 
 
 @cache
-def _table() -> tuple[NDArray, NDArray]:
-    """Phi at the left end of each cell, and its rise over the cell."""
+def pieces() -> NDArray:
+    """Parabolas through Phi at both ends and the middle of each cell, one behind the other, three numbers each.
+
+    Phi at the left end, its rise over the cell, and the bend: for compiled code, and small enough for a near cache.
+    """
     from scipy.special import ndtr
 
-    values = ndtr(np.linspace(-_REACH, _REACH, _CELLS + 1))
-    return values, np.append(np.diff(values), 0.0)
+    edges = np.linspace(-_REACH, _REACH, _CELLS + 1)
+    values, middles = ndtr(edges), ndtr(edges[:-1] + 0.5 / CELLS_OF_SD)
+    found = np.zeros((_CELLS + 1, 3))
+    found[:, 0], found[:-1, 1] = values, np.diff(values)
+    found[:-1, 2] = 2.0 * ((values[:-1] + values[1:]) - 2.0 * middles)
+    return found.ravel()
 
 
 @cache
-def lefts() -> NDArray:
-    """The table of Phi for compiled code, its last entry twice: the rise of a cell is the next entry minus its own."""
-    left = _table()[0]
-    return np.append(left, left[-1])
+def _table() -> NDArray:
+    return np.ascontiguousarray(pieces().reshape(-1, 3).T)
 
 
 def uniforms(g: NDArray) -> NDArray:
-    """Phi(g) for scores (steps, paths), NaN where they are; the error is below 3e-9. In memory that is used again."""
-    left, rise = _table()
+    """Phi(g) for scores (steps, paths), NaN where they are; the error is below 1e-9. In memory that is used again."""
+    left, rise, bend = _table()
     steps, paths = g.shape
     u, part, place = (scratch(steps, paths, number) for number in (1, 2, 3))
     np.multiply(g, CELLS_OF_SD, out=place)
@@ -42,9 +47,13 @@ def uniforms(g: NDArray) -> NDArray:
     np.clip(place, 0, _CELLS, out=place)
     cell = _whole(place)
     place -= cell
+    np.take(bend, cell, out=u, mode="clip")
+    np.subtract(place, 1.0, out=part)
+    u *= part
     np.take(rise, cell, out=part, mode="clip")
-    part *= place
-    np.take(left, cell, out=u, mode="clip")
+    u += part
+    u *= place
+    np.take(left, cell, out=part, mode="clip")
     u += part
     return u
 

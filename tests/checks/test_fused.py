@@ -196,3 +196,12 @@ def test_products_of_two_series_at_lags(unknown, ready, held):
         pairs = [later[-i] * earlier[-j] for i, j in at if i <= len(later) and j <= len(earlier)]
         expected.append(np.count_nonzero(np.isfinite(pairs)))
     np.testing.assert_array_equal(counts, expected)
+
+
+@needs_numba
+def test_strips_have_the_room_and_the_lags_that_they_are_called_with():
+    from procgen.checks import shocks, strips
+
+    assert (shocks.STRIP, shocks.ROOM) == (strips.STRIP, strips.ROOM)
+    assert (max(MEMORY_LAGS), max(shocks.CLUSTER_LAGS)) == (strips.BEFORE, strips.SIZES_BEFORE)
+    assert 4 + len(MEMORY_LAGS) + len(shocks.CLUSTER_LAGS) == strips.SUMS
