@@ -26,7 +26,7 @@ def scored(g, table, scale, counts, clusters, worst):
     table, scale: of `uniforms.pieces`.
     """
     steps, paths = g.shape
-    cells, bins = float(table.shape[0] // 3 - 1), counts.shape[0]
+    cells, bins = float(table.shape[0] // 4 - 1), counts.shape[0]
     for t in range(steps):
         row, out, bits = g[t], clusters[t], g[t].view(np.int64)
         far = np.int64(0)
@@ -34,8 +34,9 @@ def scored(g, table, scale, counts, clusters, worst):
             out[p] = min(max(row[p] * scale + 0.5 * cells, 0.0), cells)
         for p in range(paths):  # one by one: processors fetch from tables no faster in vectors
             whole = np.int64(out[p])
-            at, part = np.uint64(3 * whole), out[p] - whole
-            u = table[at] + part * (table[at + np.uint64(1)] + (part - 1.0) * table[at + np.uint64(2)])
+            at, part = np.uint64(4 * whole), out[p] - whole
+            u = table[at + np.uint64(2)] + part * table[at + np.uint64(3)]
+            u = table[at] + part * (table[at + np.uint64(1)] + part * u)
             counts[np.uint64(min(np.int64(u * bins), bins - 1))] += 1
             out[p] = u
         for p in range(paths):

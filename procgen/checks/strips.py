@@ -107,15 +107,16 @@ def _fetch(x, at, count, path, width, out):
 @_part
 def _scored(g, width, count, table, scale, counts, out):
     """Count the uniforms of so many rows of scores, and fill in their cluster scores: zeros behind the last one."""
-    cells, bins = float(table.shape[0] // 3 - 1), counts.shape[0]
+    cells, bins = float(table.shape[0] // 4 - 1), counts.shape[0]
     for k in range(out.shape[0]):
         out[k] = min(max(g[k] * scale + 0.5 * cells, 0.0), cells)
     for t in range(count):
         row = out[WIDTH * t : WIDTH * (t + 1)]
         for p in range(width):  # one by one: processors fetch from tables no faster in vectors
             whole = np.int64(row[p])
-            at, part = np.uint64(3 * whole), row[p] - whole
-            u = table[at] + part * (table[at + np.uint64(1)] + (part - 1.0) * table[at + np.uint64(2)])
+            at, part = np.uint64(4 * whole), row[p] - whole
+            u = table[at + np.uint64(2)] + part * table[at + np.uint64(3)]
+            u = table[at] + part * (table[at + np.uint64(1)] + part * u)
             counts[np.uint64(min(np.int64(u * bins), bins - 1))] += 1
             row[p] = u
     for k in range(out.shape[0]):
