@@ -42,6 +42,14 @@ def scratch(steps: int, paths: int, number: int = 0) -> NDArray:
     return kept[number][:size].reshape(steps, paths)
 
 
+def room(sizes: tuple[int, ...]) -> tuple[NDArray, ...]:
+    """Arrays of these sizes to compute in, the same memory at each call of a thread."""
+    kept: dict[tuple[int, ...], tuple[NDArray, ...]] = _local.__dict__.setdefault("rooms", {})
+    if sizes not in kept:
+        kept[sizes] = tuple([np.empty(size) for size in sizes])
+    return kept[sizes]
+
+
 def compiled(paths: int) -> bool:
     """Whether tiles of so many paths go through compiled passes."""
     return is_compiling() and paths >= WIDE

@@ -108,6 +108,53 @@ def _add_products(total, a, at, b, bt, first, end, block):
         total[p] += block[p]
 
 
+def powers(rows, sums, pairs, levels):
+    """Sums of the first four powers of rows (paths, size), paths by halves, and of products of neighbours.
+
+    What is not finite counts for nothing. pairs (2, size): numbers of neighbours that are both known, then the sums of
+    their products, joined by the same halves. levels (depth, 6, size): room for the halves that wait for their others.
+    """
+    size, waiting = rows.shape[1], 0  # bit k of `waiting`: level k holds the sums of 2^k paths
+    for path in range(rows.shape[0]):
+        row, level = rows[path], 0
+        now = levels[0]
+        while waiting >> level & 1:
+            level += 1
+        now = levels[level]
+        for k in range(size):
+            x = row[k] if abs(row[k]) < np.inf else 0.0
+            now[0, k], now[1, k], now[2, k] = x, x * x, x * x * x
+            now[3, k], now[4, k], now[5, k] = x * x * x * x, 0.0, 0.0
+        for joined in range(level):
+            left = levels[joined]
+            end = path - 2**joined  # the last path of the left half; what is between it and the next one comes last
+            a, b = rows[end], rows[end + 1]
+            for power in range(4):
+                for k in range(size):
+                    now[power, k] = left[power, k] + now[power, k]
+            for k in range(size):
+                product = a[k] * b[k]
+                both = abs(product) < np.inf
+                now[4, k] = left[4, k] + now[4, k] + (1.0 if both else 0.0)
+                now[5, k] = left[5, k] + now[5, k] + (product if both else 0.0)
+        waiting += 1
+    level, end, begun = 0, rows.shape[0], False
+    sums[:, :] = 0.0
+    pairs[:, :] = 0.0
+    while waiting >> level:
+        if waiting >> level & 1:
+            left = levels[level]
+            for k in range(size):
+                for power in range(4):
+                    sums[power, k] = left[power, k] + sums[power, k]
+                product = rows[end - 1, k] * rows[end, k] if begun else np.nan
+                both = abs(product) < np.inf
+                pairs[0, k] = left[4, k] + pairs[0, k] + (1.0 if both else 0.0)
+                pairs[1, k] = left[5, k] + pairs[1, k] + (product if both else 0.0)
+            end, begun = end - 2**level, True
+        level += 1
+
+
 def looked(x, weights, prints, low, high, zeros):
     """Add the fingerprints of values x to prints; fill the bits of the extremes of each step, and its zeros."""
     steps, paths = x.shape

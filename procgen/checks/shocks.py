@@ -25,10 +25,11 @@ from procgen.checks.blocks import (
     add_products,
     compiled,
     in_one_pass,
+    room,
     scratch,
 )
 from procgen.checks.scores import BINS, Scores, cluster_scores
-from procgen.checks.stretches import LENGTHS, StretchLane, StretchSums
+from procgen.checks.stretches import StretchLane, StretchSums
 from procgen.checks.uniforms import CELLS_OF_SD, bin_counts, pieces, uniforms
 
 MEMORY_LAGS = (1, 2, 3, 4, 5, 6, 8, 12)
@@ -168,23 +169,28 @@ class ShockSums:
         steps, paths = g.shape
         lane.view, lane.sizes = lane.scores.push(g), lane.clusters.room(steps)
         g = lane.view[len(lane.view) - steps :]
-        worst, profile, short = np.empty(steps, np.int64), np.empty((2, steps)), np.empty((steps // LENGTHS[0], paths))
+        worst, profile, blocks = np.empty(steps, np.int64), np.empty((2, steps)), np.empty((steps // BLOCK, paths))
+        squares = self.stretches.takes(first_step, lane.stretches)
         in_one_pass(
             "strips", lane.view, lane.sizes, steps, pieces(), CELLS_OF_SD, self.counts, worst, lane.totals, lane.places,
-            lane.beside, profile, scratch(2 * BLOCK, -(-paths // STRIP), 1).reshape(2, BLOCK, -1), short, _room(),
+            lane.beside, profile, scratch(2 * BLOCK, -(-paths // STRIP), 1).reshape(2, BLOCK, -1),
+            np.empty((2, paths)) if squares is None else squares, blocks, room(ROOM),
             module="strips",
         )  # fmt: skip
         for i, lag in enumerate(self.lags[len(MEMORY_LAGS) :], FIRST_LAG + len(MEMORY_LAGS)):
             add_lagged(lane.totals[i], lane.view, lane.view, lag, steps)
         if not self.scores.gaussian:
             in_one_pass("plain_sums", np.ascontiguousarray(z), lane.totals, scratch(1, paths, 1)[0])
-        for row, lags, view in ((self.memory[0], self.lags, lane.view), (self.cluster[0], CLUSTER_LAGS, lane.sizes)):
-            row += [paths * max(min(steps, len(view) - lag), 0) for lag in lags]
+        self.memory[0] += _pairs(lane.view, self.lags, steps)
+        self.cluster[0] += _pairs(lane.sizes, CLUSTER_LAGS, steps)
         self.asymmetry[0] += paths * min(steps, len(lane.view) - 1)
         self._add_profile(np.full(steps, float(paths)), profile, first_step)
         self.rows[GROUP] += steps * -(-paths // GROUP)
         self.far = farthest.farthest(g, z, x, lane.first_path, first_step, self.far, worst.view(float), self.least)
-        self.stretches.absorb(g, first_step, lane.stretches, short)
+        if squares is None:
+            self.stretches.absorb(g, first_step, lane.stretches)
+        else:
+            self.stretches.add(g, blocks, lane.stretches)
 
     def _single(self, z: NDArray, g: NDArray, lane: ShockLane, offset: int) -> None:
         add_products(lane.totals[0], g, None, offset)
@@ -263,9 +269,11 @@ class ShockSums:
 SHOCK_ARRAYS = ("sums", "counts", "paths", "profile", "memory", "cluster", "asymmetry", "square", "stretched")
 
 
-def _room() -> tuple[NDArray, ...]:
-    """What `strips` works in: the same memory at each call of a thread."""
-    return tuple(scratch(1, size, 10 + k)[0] for k, size in enumerate(ROOM))
+def _pairs(view: NDArray, lags: Sequence[int], steps: int) -> NDArray | int:
+    """How many pairs of known scores each path has at these lags in the last `steps` of a view."""
+    if len(view) - steps >= max(lags):
+        return steps * view.shape[1]
+    return np.array([max(min(steps, len(view) - lag), 0) for lag in lags]) * view.shape[1]
 
 
 def _add_in_turn(row: NDArray, values: NDArray, first: int, width: int) -> None:

@@ -35,39 +35,60 @@ class StretchSums:
     def __init__(self) -> None:
         self.sums = np.zeros((2, len(LENGTHS)))
 
-    def absorb(self, g: NDArray, first_step: int, lane: StretchLane, short: NDArray | None = None) -> None:
-        """Add scores (steps, paths) of steps that follow; a stretch with one that is not finite is left out.
-
-        `short` are their sums over stretches of the first length, where they are known.
-        """
+    def absorb(self, g: NDArray, first_step: int, lane: StretchLane) -> None:
+        """Add scores (steps, paths) of steps that follow; a stretch with one that is not finite is left out."""
         if lane.rows is None:
-            lane.rows = np.full((first_step % BLOCK, g.shape[1]), np.nan)
-            lane.blocks = np.full((first_step // BLOCK % _GROWTH, g.shape[1]), np.nan)
-        if len(lane.rows):
-            g, short = np.concatenate([lane.rows, g]), None
+            self._begin(first_step, lane)
+        if lane.rows is not None and len(lane.rows):
+            g = np.concatenate([lane.rows, g])
         whole = len(g) - len(g) % BLOCK
         lane.rows = g[whole:].copy()
-        self._add_blocks(_halved(g[:whole], 4) if short is None else short[: whole // LENGTHS[0]], lane)
+        self._add_blocks(_halved(g[:whole], 4), lane)
+
+    def takes(self, first_step: int, lane: StretchLane) -> NDArray | None:
+        """Where `strips` may add the squares of the first two lengths, if blocks begin with the next step."""
+        if lane.rows is None and first_step % BLOCK == 0:
+            self._begin(first_step, lane)
+        return lane.totals if lane.rows is not None and not len(lane.rows) else None
+
+    def add(self, g: NDArray, blocks: NDArray, lane: StretchLane) -> None:
+        """The rest of `absorb` of known scores, whose first two lengths are in the totals; their sums over blocks."""
+        lane.rows = g[len(blocks) * BLOCK :].copy()
+        lane.counts[:2] += blocks.size * np.array([BLOCK // LENGTHS[0], 1])
+        self._add_longest(blocks, lane)
+
+    def _begin(self, first_step: int, lane: StretchLane) -> None:
+        paths = lane.totals.shape[1]
+        lane.rows = np.full((first_step % BLOCK, paths), np.nan)
+        lane.blocks = np.full((first_step // BLOCK % _GROWTH, paths), np.nan)
 
     def _add_blocks(self, short: NDArray, lane: StretchLane) -> None:
         blocks = _halved(short, 2)
+        self._add_squares(0, short, lane)
+        self._add_squares(1, blocks, lane)
+        self._add_longest(blocks, lane)
+
+    def _add_longest(self, blocks: NDArray, lane: StretchLane) -> None:
         held = np.concatenate([lane.blocks, blocks]) if len(lane.blocks) else blocks
         whole = len(held) - len(held) % _GROWTH
         lane.blocks = held[whole:]
-        for k, sums in enumerate((short, blocks, _halved(held[:whole], 2))):
-            squares = sums * sums
-            known = np.isfinite(squares)
-            count = np.count_nonzero(known)
-            lane.counts[k] += count
-            if count < squares.size:
-                squares = np.where(known, squares, 0.0)
-            if k == 0:
-                squares = _halved(squares, 2)  # those of a block at once
-            if len(squares) <= _GROWTH:
-                for row in squares:
-                    lane.totals[k] += row
-            else:
-                lane.totals[k] = np.add.accumulate(np.concatenate([lane.totals[k][None], squares]), axis=0)[-1]
+        if whole:
+            self._add_squares(2, _halved(held[:whole], 2), lane)
+
+    def _add_squares(self, k: int, sums: NDArray, lane: StretchLane) -> None:
+        squares = sums * sums
+        known = np.isfinite(squares)
+        count = np.count_nonzero(known)
+        lane.counts[k] += count
+        if count < squares.size:
+            squares = np.where(known, squares, 0.0)
+        if k == 0:
+            squares = _halved(squares, 2)  # those of a block at once
+        if len(squares) <= _GROWTH:
+            for row in squares:
+                lane.totals[k] += row
+        else:
+            lane.totals[k] = np.add.accumulate(np.concatenate([lane.totals[k][None], squares]), axis=0)[-1]
 
     def finish(self, lane: StretchLane) -> None:
         """Close a range of paths."""

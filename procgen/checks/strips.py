@@ -27,13 +27,13 @@ _STEEP, _FALL = 6 * np.sqrt(5.0), 0.5 * np.sqrt(5.0)  # of `scores.cluster_score
 _part = partial(compiled_function, inline="always")
 
 
-def strips(g, clusters, steps, table, scale, counts, worst, totals, at, beside, profile, tops, short, room):
+def strips(g, clusters, steps, table, scale, counts, worst, totals, at, beside, profile, tops, squares, blocks, room):
     """Sum over the last `steps` of two windows' views, g of scores and clusters, whose new rows are filled in here.
 
     table, scale: of `uniforms.pieces`. counts: by bin of the uniforms. worst: bits of the largest size of each step.
     totals: rows by path, of which at[k] is that of sum k; beside: products with the left neighbour, from the second
-    path on. profile (2, steps): sums of g and g² over paths; tops: room for (2, 64, strips). short: sums over stretches
-    of 16 steps. room: arrays of the sizes of ROOM.
+    path on. profile (2, steps): sums of g and g² over paths; tops: room for (2, 64, strips). squares: by path those of
+    the sums over stretches of 16 and of 64 steps, the latter being blocks. room: arrays of the sizes of ROOM.
     """
     held, held_too, paths = g.shape[0] - steps, clusters.shape[0] - steps, g.shape[1]
     scores, sizes, sums, twos, fours, eights = room
@@ -73,8 +73,10 @@ def strips(g, clusters, steps, table, scale, counts, worst, totals, at, beside, 
                     total = totals[at[k]][path:]
                     for p in range(width):
                         total[p] += row[p]
-            for k in range(count // STRETCH):
-                _halved(scores[WIDTH * (BEFORE + STRETCH * k) :], width, short[(first + STRETCH * k) // STRETCH][path:])
+            if count == BLOCK:
+                for k in range(4):
+                    _halved(new[WIDTH * STRETCH * k :], twos[WIDTH * k : WIDTH * (k + 1)])
+                _stretched(twos, width, squares[0][path:], squares[1][path:], blocks[first // BLOCK][path:])
         for t in range(count):
             profile[0, first + t] = _row_sum(tops[0, t])
             profile[1, first + t] = _row_sum(tops[1, t])
@@ -191,10 +193,10 @@ def _row_sum(row):
 
 
 @_part
-def _halved(x, width, out):
+def _halved(x, out):
     """Sums over sixteen rows, neighbours first."""
     n = WIDTH
-    for p in range(width):
+    for p in range(STRIP):
         out[p] = (
             ((x[p] + x[n + p]) + (x[2 * n + p] + x[3 * n + p]))
             + ((x[4 * n + p] + x[5 * n + p]) + (x[6 * n + p] + x[7 * n + p]))
@@ -202,3 +204,15 @@ def _halved(x, width, out):
             ((x[8 * n + p] + x[9 * n + p]) + (x[10 * n + p] + x[11 * n + p]))
             + ((x[12 * n + p] + x[13 * n + p]) + (x[14 * n + p] + x[15 * n + p]))
         )
+
+
+@_part
+def _stretched(short, width, squares, more, block):
+    """Of the four sums over stretches of a block: that over the block, and what is added to the sums of squares."""
+    n = WIDTH
+    for p in range(width):
+        a, b, c, d = short[p], short[n + p], short[2 * n + p], short[3 * n + p]
+        squares[p] += (a * a + b * b) + (c * c + d * d)
+        whole = (a + b) + (c + d)
+        more[p] += whole * whole
+        block[p] = whole

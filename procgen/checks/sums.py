@@ -11,7 +11,7 @@ from collections.abc import Sequence
 import numpy as np
 from numpy.typing import NDArray
 
-from procgen.checks.blocks import GROUP, across, down
+from procgen.checks.blocks import GROUP, across, compiled, down, in_one_pass
 
 _TOGETHER = 64  # pairs of places whose products are made at once
 KEPT = 20_000  # paths whose values at probes are kept for tests of a known law
@@ -98,13 +98,20 @@ class Powers:
         known = np.isfinite(rows)
         part.n += known.sum(axis=0)
         part.paths = len(rows)
-        values = np.where(known, rows, 0.0)
-        powers = np.empty((len(rows), 4, len(self.n)))
-        powers[:, 0] = values
-        for k in range(3):
-            np.multiply(powers[:, k], values, out=powers[:, k + 1])
-        part.sums = down(powers)
-        part.pairs, part.ends = _neighbours(np.where(known, rows, np.nan))
+        if compiled(len(rows)):
+            rows, room = np.ascontiguousarray(rows, float), np.empty((len(rows).bit_length(), 6, len(self.n)))
+            in_one_pass("powers", rows, part.sums, part.pairs, room)
+            part.ends = np.where(known[[0, -1]], rows[[0, -1]], np.nan)
+            if len(rows).bit_count() > 1:
+                part.ends[1] = np.nan
+        else:
+            values = np.where(known, rows, 0.0)
+            powers = np.empty((len(rows), 4, len(self.n)))
+            powers[:, 0] = values
+            for k in range(3):
+                np.multiply(powers[:, k], values, out=powers[:, k + 1])
+            part.sums = down(powers)
+            part.pairs, part.ends = _neighbours(np.where(known, rows, np.nan))
         self.merge(part)
 
     @np.errstate(over="ignore", invalid="ignore")

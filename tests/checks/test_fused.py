@@ -12,6 +12,7 @@ from procgen.checks.lane import Pass
 from procgen.checks.scores import Scores
 from procgen.checks.shocks import MEMORY_LAGS, SHOCK_ARRAYS, ShockSums
 from procgen.checks.structure import _looked
+from procgen.checks.sums import Powers
 from procgen.checks.validate import plan_of
 from tests.studies.departures import draw, spec_of
 
@@ -205,3 +206,18 @@ def test_strips_have_the_room_and_the_lags_that_they_are_called_with():
     assert (shocks.STRIP, shocks.ROOM) == (strips.STRIP, strips.ROOM)
     assert (max(MEMORY_LAGS), max(shocks.CLUSTER_LAGS)) == (strips.BEFORE, strips.SIZES_BEFORE)
     assert 4 + len(MEMORY_LAGS) + len(shocks.CLUSTER_LAGS) == strips.SUMS
+
+
+@needs_numba
+@pytest.mark.parametrize("paths", [32, 33, 47, 64, 1000, 1024])
+def test_powers_over_paths_and_products_of_neighbours(paths):
+    rows = RNG.standard_normal((paths, 7)) * 10.0 ** np.array([0, 3, -3, 80, 160, 0, 0])
+    rows[3, 5], rows[4, 5], rows[paths - 1, 5], rows[7, 0], rows[:, 6] = np.nan, np.inf, -np.inf, -0.0, np.nan
+
+    def run():
+        powers = Powers(7)
+        powers.absorb(rows)
+        powers.absorb(rows[::-1])
+        return {name: getattr(powers, name) for name in ("n", "sums", "pairs", "ends", "paths")}
+
+    same(*both(run))
