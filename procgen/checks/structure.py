@@ -170,8 +170,8 @@ class Structure:
         for name, counts in other.narrow.items():
             self.narrow[name] = [a + b for a, b in zip(self.narrow.get(name, _UNSEEN), counts, strict=True)]
         for name, found in other.grids.items():
-            mine = self.grids.setdefault(name, {})
-            mine.update({grid: mine.get(grid, 0) + count for grid, count in found.items()})
+            known = self.grids.setdefault(name, {})
+            known.update({grid: known.get(grid, 0) + n for grid, n in found.items()})
         for name, ends in other.ends.items():
             self.ends[name] = _wider(self.ends.get(name), ends)
         for name, values in other.far.items():

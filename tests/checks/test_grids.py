@@ -89,12 +89,13 @@ def test_the_verdict_names_the_grid(spoil, said):
 
 
 def test_what_rounding_does_not_explain_is_told_for_what_it_is():
-    """Zeros in the place of gaps, and a value that stays, where 6 decimals were written of each: as tables have them."""
+    """Zeros in the place of gaps, and a value that stays, where 6 decimals were written, as tables have them."""
     x = np.round(draw(spec_of(AR, 100, 60, 5))["x"], 6)
     assert grids.spacing(x) == ("1e-06", x.size) and verdict(AR, {"x": x}).agrees is True
     zeros = x.copy()
     zeros[5:9, 30:41:2] = 0.0
-    assert verdict(AR, {"x": zeros}).headline[0].startswith("x: structure: 24 values are exactly 0, the first at path 5")
+    told = verdict(AR, {"x": zeros}).headline[0]
+    assert told.startswith("x: structure: 24 values are exactly 0, the first at path 5")
     stuck = x.copy()
     stuck[7, 20:32] = stuck[7, 20]
     assert "12 equal values in a row at path 7, steps 20–31, as if stuck" in verdict(AR, {"x": stuck}).headline[0]
