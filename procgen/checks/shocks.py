@@ -137,7 +137,8 @@ class ShockSums:
         at_once = whole and not offset and is_compiling() and lane.sound()
         lane.clean = lane.clean + len(z) if whole else 0
         if at_once:
-            self._compiled(z, g, first_step, lane, z if x is None else x)
+            run = self._compiled if compiled(z.shape[1]) else self._few
+            run(z, g, first_step, lane, z if x is None else x)
             return
         clusters, worst = self._scored(g, known, whole)
         values, first = z if x is None else x, first_step + offset
@@ -148,21 +149,17 @@ class ShockSums:
         self.stretches.absorb(g, first_step + offset, lane.stretches)
 
     def _scored(self, g: NDArray, known: NDArray, whole: bool) -> tuple[NDArray, NDArray | None]:
-        """Count the uniforms of scores; their cluster scores, and a bound on the sizes of each step, or None."""
+        """Count the uniforms of scores; their cluster scores, and bounds on the sizes of runs of steps, or None."""
         if not (whole and is_compiling() and g.flags.c_contiguous):
             u = uniforms(g)
             self.counts += bin_counts(u if whole else u[known])
             return cluster_scores(u), None
-        clusters = np.empty(g.shape)
-        return clusters, self._scored_at_once(g, clusters)
-
-    def _scored_at_once(self, g: NDArray, clusters: NDArray) -> NDArray:
-        """Count the uniforms of scores and fill in their cluster scores; a bound on the sizes of runs of steps."""
-        height = 1 if compiled(g.shape[1]) else BLOCK if len(g) % BLOCK == 0 else len(g)
-        rows = g.reshape(len(g) // height, -1)  # of few paths one step is short
-        worst, room = np.empty(len(rows), np.int64), scratch(1, rows.shape[1], 1)[0]
+        height = BLOCK if len(g) % BLOCK == 0 else len(g)  # steps that go as one row: of few paths one is short
+        rows, clusters = g.reshape(len(g) // height, -1), np.empty(g.shape)
+        worst = np.empty(len(rows), np.int64)
+        room = scratch(1, rows.shape[1], 1)[0]
         in_one_pass("scored", rows, lefts(), CELLS_OF_SD, self.counts, clusters.reshape(rows.shape), worst, room)
-        return worst.view(float)
+        return clusters, worst.view(float)
 
     def _compiled(self, z: NDArray, g: NDArray, first_step: int, lane: ShockLane, x: NDArray) -> None:
         """The same as the rest of `absorb`, where all shocks are known, in fewer passes."""
@@ -170,21 +167,35 @@ class ShockSums:
         lane.view, clusters = lane.scores.push(g), lane.clusters.room(steps)
         lane.sizes = clusters
         g = lane.view[len(lane.view) - steps :]
-        sums, short = np.empty((2, steps)), np.empty((steps // LENGTHS[0], paths))
-        worst = self._scored_at_once(g, clusters[len(clusters) - steps :])
-        into, room = (lane.totals, lane.beside, sums, short), np.empty(3 * paths + BLOCK)
+        worst, sums = np.empty(steps, np.int64), np.empty((2, steps))
+        short, room = np.empty((steps // LENGTHS[0], paths)), (np.empty(paths), np.empty(2 * paths + BLOCK))
+        new = clusters[len(clusters) - steps :]
+        in_one_pass("scored", g, lefts(), CELLS_OF_SD, self.counts, new, worst, room[0])
         both = np.array(self.lags), np.array(CLUSTER_LAGS)
-        if compiled(paths):
-            in_one_pass("summed", lane.view, clusters, steps, *both, *into, room[:paths], room[paths:])
-        else:
-            in_few("summed", lane.view.reshape(-1), clusters.reshape(-1), paths, steps, *both, *into, room)
-        if not self.scores.gaussian and compiled(paths):
-            in_one_pass("plain_sums", np.ascontiguousarray(z), lane.totals, room[:paths])
-        elif not self.scores.gaussian:
-            add_products(lane.totals[2], z, None)
-            add_products(lane.totals[3], z, z)
+        in_one_pass("summed", lane.view, clusters, steps, *both, lane.totals, lane.beside, sums, short, *room)
+        if not self.scores.gaussian:
+            in_one_pass("plain_sums", np.ascontiguousarray(z), lane.totals, room[0])
         for row, lags, held in ((self.memory[0], self.lags, lane.view), (self.cluster[0], CLUSTER_LAGS, clusters)):
             row += [paths * max(min(steps, len(held) - lag), 0) for lag in lags]
+        self.asymmetry[0] += paths * min(steps, len(lane.view) - 1)
+        self._add_profile(np.full(steps, float(paths)), sums, first_step)
+        self.rows.update({GROUP: steps * -(-paths // GROUP)})
+        self.far = farthest.farthest(g, z, x, lane.first_path, first_step, self.far, worst.view(float), self.least)
+        self.stretches.absorb(g, first_step, lane.stretches, short)
+
+    def _few(self, z: NDArray, g: NDArray, first_step: int, lane: ShockLane, x: NDArray) -> None:
+        """The same for few paths."""
+        steps, paths = g.shape
+        clusters, worst = self._scored(g, g, True)
+        lane.view, lane.sizes = lane.scores.push(g), lane.clusters.push(clusters)
+        sums, short = np.empty((2, steps)), np.empty((steps // LENGTHS[0], paths))
+        views, lags = (lane.view.reshape(-1), lane.sizes.reshape(-1)), (np.array(self.lags), np.array(CLUSTER_LAGS))
+        in_few("summed", *views, paths, steps, *lags, lane.totals, lane.beside, sums, short, scratch(1, 3 * paths)[0])
+        if not self.scores.gaussian:
+            add_products(lane.totals[2], z, None)
+            add_products(lane.totals[3], z, z)
+        for row, each, held in ((self.memory[0], self.lags, lane.view), (self.cluster[0], CLUSTER_LAGS, lane.sizes)):
+            row += [paths * max(min(steps, len(held) - lag), 0) for lag in each]
         self.asymmetry[0] += paths * min(steps, len(lane.view) - 1)
         self._add_profile(np.full(steps, float(paths)), sums, first_step)
         if paths > 1:
