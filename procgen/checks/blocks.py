@@ -60,6 +60,11 @@ def in_one_pass(name: str, *args: Any, module: str = "fused") -> None:
     machine(module, name, __package__)(*args)
 
 
+def in_few(name: str, *args: Any) -> None:
+    """Call a function of `fused_few`, which goes along the paths one by one."""
+    in_one_pass(name, *args, module="fused_few")
+
+
 def across(x: NDArray) -> NDArray:
     """Sum over the last axis, neighbours first."""
     while x.shape[-1] > 1:
@@ -96,9 +101,12 @@ def add_products(total: NDArray, a: NDArray, b: NDArray | None = None, offset: i
 
 def _summed(total: NDArray, factors: Sequence[NDArray], offset: int) -> NDArray:
     steps, paths = factors[0].shape
-    if compiled(paths) and all(x.flags.c_contiguous for x in factors):
-        new = total.copy()
-        in_one_pass("add_products", new, factors[0], factors[-1], len(factors) - 1, offset, np.empty(paths))
+    if is_compiling() and all(x.flags.c_contiguous for x in factors):
+        new, both = total.copy(), len(factors) - 1
+        if compiled(paths):
+            in_one_pass("add_products", new, factors[0], factors[-1], both, offset, np.empty(paths))
+        else:
+            in_few("add_products", new, factors[0].reshape(-1), factors[-1].reshape(-1), both, offset)
         return new
     head = min(-offset % BLOCK, steps)
     middle = head + (steps - head) // BLOCK * BLOCK
@@ -118,12 +126,15 @@ def _block_sums(factors: Sequence[NDArray]) -> NDArray:
     """(blocks, paths): sums over the steps of each block, (blocks, steps, paths), one step after another.
 
     The library adds whole rows in turn, whatever their width. Less than a lane group is the same few paths however
-    the ensemble is cut; its columns are long and go one by one.
+    the ensemble is cut; its columns are long and go one by one, with room between their values: what lies side by
+    side the library adds in another order.
     """
     paths = factors[0].shape[2]
     both = len(factors) > 1
     if paths >= GROUP - 1:  # or the pairs of neighbours in one
         return np.einsum("btp,btp->bp" if both else "btp->bp", *factors)
+    if paths == 1:
+        factors = [np.repeat(x, 2, axis=2)[:, :, :1] for x in factors]
     columns = [np.einsum("bt,bt->b" if both else "bt->b", *(x[:, :, k] for x in factors)) for k in range(paths)]
     return np.stack(columns, axis=1)
 
@@ -176,10 +187,13 @@ def add_lags(totals: NDArray, a: NDArray, b: NDArray, lags: Sequence[int], steps
     """
     sides = [(a, b, lag) if lag >= 0 else (b, a, -lag) for lag in lags]
     new = [min(steps, steps - ready - lag) for _, _, lag in sides]
-    if compiled(totals.shape[1]) and a.flags.c_contiguous and b.flags.c_contiguous:
+    if is_compiling() and a.flags.c_contiguous and b.flags.c_contiguous:
         known = [max(min(n, len(x), len(y) - lag), 0) for n, (x, y, lag) in zip(new, sides, strict=True)]
-        sums = totals.copy()
-        in_one_pass("lagged", a, b, steps, np.array(lags), np.array(known), sums, np.empty(totals.shape[1]))
+        sums, both = totals.copy(), (np.array(lags), np.array(known))
+        if compiled(totals.shape[1]):
+            in_one_pass("lagged", a, b, steps, *both, sums, np.empty(totals.shape[1]))
+        else:
+            in_few("lagged", a.reshape(-1), b.reshape(-1), steps, *both, sums)
         if np.isfinite(sums).all():
             totals[...] = sums
             return [totals.shape[1] * count for count in known]

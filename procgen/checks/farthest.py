@@ -44,16 +44,16 @@ def farthest(
 ) -> list[Far]:
     """The KEPT farthest of those known, of earlier steps, and a tile (steps, paths) of scores g, shocks z, values x.
 
-    Of scores of one size the earlier are kept. `worst` (steps,): a bound on the sizes of each step, where one is
-    known; only scores larger than `least` are wanted.
+    Of scores of one size the earlier are kept. `worst`: bounds on the sizes of runs of steps, as many in each, where
+    they are known; only scores larger than `least` are wanted.
     """
     least = max(least, known[-1][0]) if len(known) == KEPT else least
     with np.errstate(invalid="ignore"):
         if worst is None:
             worst = np.fmax(np.fmax.reduce(g, axis=1), -np.fmin.reduce(g, axis=1))
-        rows = np.flatnonzero(worst > least)
-        if not rows.size:
+        if not (worst > least).any():
             return list(known)
+        rows = np.flatnonzero(np.repeat(worst > least, len(g) // len(worst)))
         sizes = np.abs(g[rows])
         at, paths = np.nonzero(sizes > least)
     found = sizes[at, paths]

@@ -232,7 +232,9 @@ class Gather:
         return [values for values in found if values.dtype == kind]
 
 
-_FACTS = ("not_finite", "off_grid", "narrow", "far", "beyond", "outside", "moved", "zeros", "ends", "runs", "stayed")
+_FACTS = (
+    "not_finite", "off_grid", "narrow", "grids", "far", "beyond", "outside", "moved", "zeros", "ends", "runs", "stayed",
+)  # fmt: skip
 
 
 def _lags(plan: SeriesPlan) -> tuple[int, ...]:

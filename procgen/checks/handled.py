@@ -12,6 +12,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.checks import grids
 from procgen.checks.verdict import Check
 from procgen.checks.words import many, number
 
@@ -19,8 +20,8 @@ CAUSE = "what was done to the values"
 _EXACT = 0.02  # standard errors within which a mean or spread is no accident; true ones are 1 time in 60
 _FEWEST = 5  # paths of which each must be so
 _MOST = 0.9  # share of values that must be rounded
-_GRIDS = (0, 1, 2, 3, 4)  # decimals
-_WHOLE = 2.0**40  # size beyond which a number may have no digits after the point without being rounded
+_FINEST = 1e-4  # decimals that are told: tables are often written with more of them
+_FINE = 1e-4  # the same of other grids, in standard deviations
 _OVERLAP = 4  # equal values that make windows overlap
 
 
@@ -101,11 +102,11 @@ def _rounded(x: NDArray, plan: Any, declared: int | None) -> str:
 
     if lumpy(plan.theory) or not plan.smooth:
         return ""
-    small = np.abs(x) < _WHOLE
-    for decimals in _GRIDS if declared is None else range(max(min(declared, len(_GRIDS)), 0)):
-        scale = 10.0**decimals
-        if np.count_nonzero((np.rint(x * scale) / scale == x) & small) > _MOST * x.size:
-            known = "which is not declared" if declared is None else f"where the spec declares {declared}"
-            mend = f"write `decimals: {decimals}` if that is meant"
-            return f"values are rounded to {many(decimals, 'decimal')}, {known}; {mend}"
-    return ""
+    found, count = grids.spacing(x.ravel())
+    if count <= _MOST * x.size:
+        return ""
+    grid = float(found)
+    coarse = (_FINEST if grids.decimals(grid) is not None else _FINE * float(x.std())) * (1.0 - 1e-6)
+    if grid < max(coarse, 0.0 if declared is None else (1.0 + 1e-6) * 10.0**-declared):
+        return ""
+    return grids.said(grid, declared)

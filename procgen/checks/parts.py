@@ -21,7 +21,6 @@ from procgen.checks.gather import Gather, Plan
 from procgen.checks.lane import Pass, repays
 from procgen.checks.rectangles import Blocks, Values, first_values, grouped, named
 from procgen.ensemble import digest
-from procgen.ensemble.columns import as_float
 from procgen.ensemble.ensemble import OnDisk, open_ensemble
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.manifest import node
@@ -115,6 +114,7 @@ class _Chain:
         self.parts = {number: ensemble.manifest.parts[number] for number in numbers}
         self.nodes: list[tuple[int, dict[str, str]]] = []  # number of a part, packed nodes by column
         self.faults: list[tuple[str, str]] = []  # where, and what
+        self._room: dict[str, NDArray] = {}
 
     def blocks(self) -> Iterator[tuple[int, int, Values]]:
         """Blocks of whole lane groups; where a part cannot be read it ends, with a fault."""
@@ -140,12 +140,22 @@ class _Chain:
         while left:
             block, values = next(pieces)
             left -= block.rows
-            numbers = {name: as_float(values[name]) for name in leaves}
+            numbers = {name: self._as_float(name, values[name]) for name in leaves}
             for name, leaf in leaves.items():
                 leaf.add(block.first_path, block.first_step, numbers[name])
             yield block.first_path, block.first_step, {name: numbers[column] for name, column in self.columns.items()}
         whole = self.ensemble.manifest.whole
         self.nodes.append((number, {name: digest.pack(leaf.nodes(whole)) for name, leaf in leaves.items()}))
+
+    def _as_float(self, name: str, values: NDArray) -> NDArray:
+        """Stored values as float64, in the same memory for each piece: among what else is asked for it would grow."""
+        if values.dtype == np.float64:
+            return values
+        if name not in self._room or self._room[name].size < values.size:
+            self._room[name] = np.empty(values.size)
+        numbers = self._room[name][: values.size].reshape(values.shape)
+        numbers[...] = values
+        return numbers
 
 
 def _whole(blocks: Blocks, part: Block) -> tuple[int, int, Values]:

@@ -24,12 +24,13 @@ from procgen.checks.blocks import (
     add_lags,
     add_products,
     compiled,
+    in_few,
     in_one_pass,
     room,
     scratch,
 )
 from procgen.checks.scores import BINS, Scores, cluster_scores
-from procgen.checks.stretches import StretchLane, StretchSums
+from procgen.checks.stretches import LENGTHS, StretchLane, StretchSums
 from procgen.checks.uniforms import CELLS_OF_SD, bin_counts, pieces, uniforms
 
 MEMORY_LAGS = (1, 2, 3, 4, 5, 6, 8, 12)
@@ -139,10 +140,11 @@ class ShockSums:
         lane.length += len(z) if whole else known.sum(axis=0)
         self.outside += self.scores.outside(z)
         g = self.scores.normal_scores(z)
-        at_once = whole and not offset and compiled(z.shape[1]) and lane.sound()
+        at_once = whole and not offset and is_compiling() and lane.sound()
         lane.clean = lane.clean + len(z) if whole else 0
         if at_once:
-            self._compiled(z, g, first_step, lane, z if x is None else x)
+            run = self._compiled if compiled(z.shape[1]) else self._few
+            run(z, g, first_step, lane, z if x is None else x)
             return
         clusters, worst = self._scored(g, known, whole)
         values, first = z if x is None else x, first_step + offset
@@ -153,7 +155,7 @@ class ShockSums:
         self.stretches.absorb(g, first_step + offset, lane.stretches)
 
     def _scored(self, g: NDArray, known: NDArray, whole: bool) -> tuple[NDArray, NDArray | None]:
-        """Count the uniforms of scores; their cluster scores, and a bound on the sizes of each step, or None."""
+        """Count the uniforms of scores; their cluster scores, and bounds on the sizes of runs of steps, or None."""
         if not (whole and is_compiling() and g.flags.c_contiguous):
             u = uniforms(g)
             self.counts += bin_counts(u if whole else u[known])
@@ -162,7 +164,7 @@ class ShockSums:
         rows, clusters = g.reshape(len(g) // height, -1), np.empty(g.shape)
         worst = np.empty(len(rows), np.int64)
         in_one_pass("scored", rows, pieces(), CELLS_OF_SD, self.counts, clusters.reshape(rows.shape), worst)
-        return clusters, np.repeat(worst.view(float), height)
+        return clusters, worst.view(float)
 
     def _compiled(self, z: NDArray, g: NDArray, first_step: int, lane: ShockLane, x: NDArray) -> None:
         """The same as the rest of `absorb`, where all shocks are known, in one pass."""
@@ -191,6 +193,26 @@ class ShockSums:
             self.stretches.absorb(g, first_step, lane.stretches)
         else:
             self.stretches.add(g, blocks, lane.stretches)
+
+    def _few(self, z: NDArray, g: NDArray, first_step: int, lane: ShockLane, x: NDArray) -> None:
+        """The same for few paths."""
+        steps, paths = g.shape
+        clusters, worst = self._scored(g, g, True)
+        lane.view, lane.sizes = lane.scores.push(g), lane.clusters.push(clusters)
+        sums, short = np.empty((2, steps)), np.empty((steps // LENGTHS[0], paths))
+        views, lags = (lane.view.reshape(-1), lane.sizes.reshape(-1)), (np.array(self.lags), np.array(CLUSTER_LAGS))
+        in_few("summed", *views, paths, steps, *lags, lane.totals, lane.beside, sums, short, scratch(1, 3 * paths)[0])
+        if not self.scores.gaussian:
+            add_products(lane.totals[2], z, None)
+            add_products(lane.totals[3], z, z)
+        for row, each, held in ((self.memory[0], self.lags, lane.view), (self.cluster[0], CLUSTER_LAGS, lane.sizes)):
+            row += [paths * max(min(steps, len(held) - lag), 0) for lag in each]
+        self.asymmetry[0] += paths * min(steps, len(lane.view) - 1)
+        self._add_profile(np.full(steps, float(paths)), sums, first_step)
+        if paths > 1:
+            self.rows.update({min(paths, GROUP): steps * -(-paths // GROUP)})
+        self.far = farthest.farthest(g, z, x, lane.first_path, first_step, self.far, worst, self.least)
+        self.stretches.absorb(g, first_step, lane.stretches, short)
 
     def _single(self, z: NDArray, g: NDArray, lane: ShockLane, offset: int) -> None:
         add_products(lane.totals[0], g, None, offset)
@@ -278,6 +300,9 @@ def _pairs(view: NDArray, lags: Sequence[int], steps: int) -> NDArray | int:
 
 def _add_in_turn(row: NDArray, values: NDArray, first: int, width: int) -> None:
     """Add values that begin at place `first` to the entries of a row that `width` of them share, in their order."""
+    if is_compiling():
+        in_few("in_turn", row, np.ascontiguousarray(values), first, width)
+        return
     head = min(-first % width, len(values))
     whole = head + (len(values) - head) // width * width
     for start, end in ((0, head), (head, whole), (whole, len(values))):

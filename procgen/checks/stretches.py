@@ -35,15 +35,18 @@ class StretchSums:
     def __init__(self) -> None:
         self.sums = np.zeros((2, len(LENGTHS)))
 
-    def absorb(self, g: NDArray, first_step: int, lane: StretchLane) -> None:
-        """Add scores (steps, paths) of steps that follow; a stretch with one that is not finite is left out."""
+    def absorb(self, g: NDArray, first_step: int, lane: StretchLane, short: NDArray | None = None) -> None:
+        """Add scores (steps, paths) of steps that follow; a stretch with one that is not finite is left out.
+
+        `short` are their sums over stretches of the first length, where they are known.
+        """
         if lane.rows is None:
             self._begin(first_step, lane)
         if lane.rows is not None and len(lane.rows):
-            g = np.concatenate([lane.rows, g])
+            g, short = np.concatenate([lane.rows, g]), None
         whole = len(g) - len(g) % BLOCK
         lane.rows = g[whole:].copy()
-        self._add_blocks(_halved(g[:whole], 4), lane)
+        self._add_blocks(_halved(g[:whole], 4) if short is None else short[: whole // LENGTHS[0]], lane)
 
     def takes(self, first_step: int, lane: StretchLane) -> NDArray | None:
         """Where `strips` may add the squares of the first two lengths, if blocks begin with the next step."""

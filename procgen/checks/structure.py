@@ -10,7 +10,7 @@ from functools import lru_cache
 import numpy as np
 from numpy.typing import NDArray
 
-from procgen.checks import copies, extremes, support
+from procgen.checks import copies, extremes, grids, support
 from procgen.checks.blocks import compiled, in_one_pass
 from procgen.checks.verdict import Check
 from procgen.checks.words import many, number
@@ -19,12 +19,12 @@ _SHORT = 1024  # steps of a tile whose weights are kept
 _AT_ONCE = 1 << 14  # values of a fingerprint: what is computed on the way stays in the cache
 _SAMPLE = 61  # every so manieth step's bits are looked at for a detour through float32; at least 32 steps
 _SPACING = {"float32": 2.0**-24 + 4e-16}  # how far, of its size, a stored decimal number may lie from itself
-_GRIDS = {1: 10.0, 2: 100.0, 3: 1000.0}  # decimals to which values may be seen to be rounded
-_UNSEEN = (0, 0, 0, 0, *(0 for _ in _GRIDS))  # that fit float32, whole ones, all, that fit float16; by grid
+_UNSEEN = (0, 0, 0, 0)  # values that fit float32, whole ones, all, those that fit float16
 _MOST = 0.9  # share of values that must be rounded
 _CERTAIN = 1e-12  # expected number of equal pairs below which one equal pair is no chance
 _WHOLE = 2.0**40  # size beyond which a number may have no digits after the point without being rounded
 ZEROS = "values that are 0"
+_WHOLE_NUMBERS = "values are rounded to whole numbers, where no rounding (`decimals: 0`) is declared"
 
 
 @dataclass
@@ -52,6 +52,7 @@ class Structure:
     not_finite: dict[str, list[int]] = field(default_factory=dict)  # series -> [count, path, step of the first]
     off_grid: dict[str, list[int]] = field(default_factory=dict)
     narrow: dict[str, list[int]] = field(default_factory=dict)  # series -> counts of values, as _UNSEEN has them
+    grids: dict[str, dict[str, int]] = field(default_factory=dict)  # series -> values on a grid, by its spacing
     far: dict[str, list[extremes.Far]] = field(default_factory=dict)  # series -> its values farthest from their mean
     beyond: dict[str, list[int]] = field(default_factory=dict)  # series -> numbers of values outside, and absurd ones
     outside: dict[str, support.Found] = field(default_factory=dict)  # series -> values that it cannot give
@@ -111,10 +112,13 @@ class Structure:
             small = np.abs(sample) < _WHOLE
             whole = int(np.count_nonzero((np.rint(sample) == sample) & small))
             half = int(np.count_nonzero(sample.astype(np.float16) == sample)) if fits else 0
-            grids = [int(np.count_nonzero((np.rint(sample * s) / s == sample) & small)) for s in _GRIDS.values()]
         seen = self.narrow.setdefault(name, [0] * len(_UNSEEN))
-        for k, count in enumerate((fits, whole, sample.size, half, *grids)):
+        for k, count in enumerate((fits, whole, sample.size, half)):
             seen[k] += count
+        grid, count = grids.spacing(sample)
+        if grid:
+            mine = self.grids.setdefault(name, {})
+            mine[grid] = mine.get(grid, 0) + count
         if sample.size:
             ends = [float(np.fmin.reduce(sample)), float(np.fmax.reduce(sample))]
             self.ends[name] = _wider(self.ends.get(name), ends)
@@ -171,6 +175,9 @@ class Structure:
                 mine[name] = [old[0] + count, *min((old[1], old[2]), (path, step))]
         for name, counts in other.narrow.items():
             self.narrow[name] = [a + b for a, b in zip(self.narrow.get(name, _UNSEEN), counts, strict=True)]
+        for name, found in other.grids.items():
+            known = self.grids.setdefault(name, {})
+            known.update({grid: known.get(grid, 0) + n for grid, n in found.items()})
         for name, ends in other.ends.items():
             self.ends[name] = _wider(self.ends.get(name), ends)
         for name, values in other.far.items():
@@ -222,8 +229,11 @@ class Structure:
         fault = (
             f"{count:,} values are exactly 0, the first at path {path}, step {step}, as if it stood for what is missing"
         )
-        fits, _, seen, *_ = self.narrow.get(what.name, _UNSEEN)
-        if count and (self._grid(what) is not None or fits > _MOST * seen):
+        fits, _, seen, _ = self.narrow.get(what.name, _UNSEEN)
+        grid = self._grid(what)
+        coarser = what.repeats if grid is None else what.repeats.on(grid)
+        by_chance = coarser is None or not _unlikely(count, n * coarser.chance)
+        if count and (fits > _MOST * seen or (grid is not None and by_chance)):
             note = "values are rounded, so that 0 may be one of them"
             yield Check(what.name, ZEROS, "all steps", "structure", outcome="untestable", note=note)
             return
@@ -239,18 +249,15 @@ class Structure:
                 f"{count:,} value{'s have' if count > 1 else ' has'} more than the {many(what.decimals, 'decimal')} "
                 f"declared, the first at path {path}, step {step}"
             )
-        fits, whole, seen, half, *_ = self.narrow.get(what.name, _UNSEEN)
-        told = what.smooth and what.type == "float64" and seen >= 32
-        if told and fits > _MOST * seen:
+        fits, whole, seen, half = self.narrow.get(what.name, _UNSEEN)
+        told, grid = what.smooth and what.type == "float64" and seen >= 32, self._grid(what)
+        narrow = told and max(fits, whole) > _MOST * seen
+        if narrow and grid is None:
             type = "float16" if half > _MOST * seen else "float32"
             mend = "" if type == "float16" else "; write `type: float32` if that is meant"
             fault = f"values went through {type} (all fit in it), where float64 is declared{mend}"
-        if told and whole > _MOST * seen:
-            fault = "values are rounded to whole numbers, where no rounding (`decimals: 0`) is declared"
-        decimals = self._grid(what)
-        if decimals and any(row.outcome == "departs" for row in self._repeated(what, what.repeats)):
-            grid = many(decimals, "decimal")
-            fault = f"values are rounded to {grid}, which is not declared; write `decimals: {decimals}`"
+        elif grid is not None and (narrow or self._makes_repeats(what, grid)):
+            fault = _WHOLE_NUMBERS if grid == 1.0 else grids.said(grid)
         if what.type == "float32" and fits < seen:
             fault = "values are finer than float32, which is declared"
         low, high = self.ends.get(what.name, (math.nan, math.nan))
@@ -258,13 +265,22 @@ class Structure:
             fault = f"all values are {number(low, 6)}"
         return Check.fact(what.name, "precision", "all steps", fault, f"as declared: {declared}")
 
-    def _grid(self, what: Precision) -> int | None:
-        """The decimals to which values are seen to be rounded though none are declared; None where they are not."""
-        _, whole, seen, _, *grids = self.narrow.get(what.name, _UNSEEN)
+    def _grid(self, what: Precision) -> float | None:
+        """The spacing of the grid that values are seen to lie on though none is declared; None where they do not."""
+        _, whole, seen, _ = self.narrow.get(what.name, _UNSEEN)
         if what.decimals is not None or seen < 32 or not what.smooth:
             return None
-        counts = {0: whole, **dict(zip(_GRIDS, grids, strict=True))}
-        return next((decimals for decimals, count in counts.items() if count > _MOST * seen), None)
+        found = max(self.grids.get(what.name, {}).items(), key=lambda item: item[1], default=("", 0))
+        if found[1] > _MOST * seen:
+            return float(found[0])
+        return 1.0 if whole > _MOST * seen else None
+
+    def _makes_repeats(self, what: Precision, grid: float) -> bool:
+        """Whether values repeat as those of the declared precision do not, and those on a grid do."""
+        coarser = what.repeats.on(grid) if what.repeats is not None else None
+        declared = [row for row in self._repeated(what, what.repeats) if row.outcome == "departs"]
+        still = {row.what for row in self._repeated(what, coarser) if row.outcome == "departs"}
+        return any(row.what not in still for row in declared)
 
     def _repeated(self, what: Precision, repeats: copies.Repeats | None) -> list[Check]:
         """The checks of values that repeat, with the chance of that which is given."""
@@ -305,10 +321,10 @@ class Structure:
         Where values are seen to be rounded, more may repeat by chance than where they are as declared.
         """
         for what in self.series:
-            rows, decimals = self._repeated(what, what.repeats), self._grid(what)
+            rows, grid = self._repeated(what, what.repeats), self._grid(what)
             doubts = {copies.STUCK: "one value marks what is missing"} if what.name in marked else {}
-            if what.repeats is not None and decimals is not None:
-                coarser = what.repeats.on(10.0**-decimals)
+            if what.repeats is not None and grid is not None:
+                coarser = what.repeats.on(grid)
                 rows = rows if coarser is None else self._repeated(what, coarser)
                 if coarser is None or coarser.length > what.repeats.length:
                     doubts[copies.COPIED] = "values are rounded, so that so few may be there twice by chance"
@@ -318,6 +334,11 @@ class Structure:
                 if row.outcome == "departs" and row.what in doubts:
                     row.outcome, row.note = "untestable", doubts[row.what]
                 yield row
+
+
+def _unlikely(count: int, expected: float) -> bool:
+    """Whether so many rarities are no chance: at least n of them have a chance of at most expected^n / n!."""
+    return count * math.log(expected) - math.lgamma(count + 1) < math.log(_CERTAIN)
 
 
 def _note(book: dict[str, list[int]], name: str, where: NDArray, first_path: int, first_step: int) -> None:

@@ -3,6 +3,7 @@
 import math
 
 import numpy as np
+import pytest
 from scipy.special import ndtr
 
 from procgen.checks.blocks import Window, across, add_lagged, add_products
@@ -35,6 +36,22 @@ def test_a_tile_may_begin_within_a_block():
     add_products(whole, np.vstack([np.zeros((30, 16)), x[30:]]), None)
     add_products(late, x[30:], None, 30)
     np.testing.assert_array_equal(whole, late)
+
+
+@pytest.mark.parametrize("paths", [1, 2, 15, 16])
+@pytest.mark.parametrize("steps", [40, 64, 400])
+def test_steps_are_added_one_by_one_within_a_block(paths, steps):
+    a, b = np.random.default_rng(paths).standard_normal((2, steps, paths))
+    one, two = np.zeros(paths), np.zeros(paths)
+    for first in range(0, steps, 64):  # the bits of a plain loop
+        sums, products = np.zeros(paths), np.zeros(paths)
+        for t in range(first, min(first + 64, steps)):
+            sums, products = sums + a[t], products + a[t] * b[t]
+        one, two = one + sums, two + products
+    for plain, factors in ((one, (a,)), (two, (a, b))):
+        total = np.zeros(paths)
+        add_products(total, *factors)
+        np.testing.assert_array_equal(total, plain)
 
 
 def test_a_range_of_paths_is_the_sum_of_its_halves():

@@ -7,6 +7,7 @@ import numpy as np
 import pytest
 from scipy import stats
 
+from procgen.chance import kernel
 from procgen.chance.laws import LAWS
 from procgen.checks.judge_shocks import cross_checks, shock_checks
 from procgen.checks.scores import BINS, Scores, bin_counts
@@ -153,5 +154,9 @@ def test_steps_that_share_an_entry_are_added_one_after_another(first, count):
     expected = row.copy()
     for k in range(count):  # the bits of a plain loop
         expected[(first + k) // width] += values[k]
+    found = row.copy()
+    with kernel.compiling(kernel.available()):
+        _add_in_turn(found, values, first, width)
     _add_in_turn(row, values, first, width)
     np.testing.assert_array_equal(row, expected)
+    np.testing.assert_array_equal(found, expected)
