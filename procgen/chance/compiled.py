@@ -84,6 +84,7 @@ def turned(values, out, first):
 
 def words(k0, k1, step, path, out):
     """The words of the steps and paths from these on, into uint64 out (steps, paths)."""
+    k0, k1 = np.uint64(k0), np.uint64(k1)
     paths = out.shape[1]
     for i in range(out.shape[0]):
         section, place = _position(step + i)
@@ -97,6 +98,7 @@ def words(k0, k1, step, path, out):
 
 def uniforms(k0, k1, step, path, out):
     """The same as uniforms ((word >> 12) + 1/2) 2**-52, into float64 out."""
+    k0, k1 = np.uint64(k0), np.uint64(k1)
     paths = out.shape[1]
     first, whole, cut, end = _ends(path, paths)
     for i in range(out.shape[0]):

@@ -237,8 +237,7 @@ def machine(module: str, function: str, room: str = __package__) -> Machine:
 
 def are_kept() -> bool:
     """Whether the kernels that nearly all draws need are kept as machine code here."""
-    key, nothing = np.uint64(0), np.empty((0, 0))
-    return machine("compiled", "uniforms").is_kept(key, key, 0, 0, nothing)
+    return machine("compiled", "uniforms").is_kept(0, 0, 0, 0, np.empty((0, 0)))
 
 
 def compiled_function(function: Callable, inline: Literal["never", "always"] = "never") -> Callable:

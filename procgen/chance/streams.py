@@ -138,7 +138,7 @@ def _compiled(key: tuple[int, int], first_path: int, first_step: int, out: np.nd
     """The same filling by `procgen.chance.compiled`."""
     made = np.ascontiguousarray(out)
     fill = machine("compiled", "uniforms" if out.dtype == np.float64 else "words")
-    fill(*map(np.uint64, key), first_step, first_path, made)
+    fill(*key, first_step, first_path, made)
     if made is not out:
         out[...] = made
 
