@@ -126,6 +126,11 @@ def _processor() -> tuple[str, str]:
     return name, os.environ.get("NUMBA_CPU_FEATURES", features)
 
 
+def multiplies_eight() -> bool:
+    """Whether code is for a processor that multiplies eight whole numbers of 64 bits at once."""
+    return "+avx512dq" in _processor()[1].split(",")
+
+
 @cache
 def _host() -> tuple[str, ...]:
     """What machine code depends on beside its text."""
