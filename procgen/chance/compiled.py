@@ -100,9 +100,18 @@ def _ends(path, paths):
     return first, min((path + 3) // 4, end), max((path + paths) // 4, first), end
 
 
-def turned(values, out, first):
-    """Values (steps, paths) into the columns from `first` on of out (paths, steps), a square at a time."""
+def turned(values, out, first, odd):
+    """Values (steps, paths) into the columns from `first` on of out (paths, steps), a square at a time.
+
+    odd: int64, how many are infinite, and how many are not a number.
+    """
     steps, paths = values.shape
+    infinite, unknown = 0, 0
+    for i in range(steps):
+        for j in range(paths):
+            infinite += abs(values[i, j]) == np.inf
+            unknown += values[i, j] != values[i, j]
+    odd[0], odd[1] = infinite, unknown
     for path in range(0, paths, _SQUARE):
         for step in range(0, steps, _SQUARE):
             if path + _SQUARE <= paths and step + _SQUARE <= steps:
