@@ -7,6 +7,7 @@ from collections.abc import Callable
 import numpy as np
 
 BLOCK = 16384  # values: 128 KiB of float64
+CHUNK = 1024  # values that machine code has at hand
 
 
 class Scratch:
@@ -25,12 +26,16 @@ class Scratch:
 
 
 def blockwise(
-    function: Callable[[np.ndarray, np.ndarray, Scratch], object], x, out: np.ndarray | None = None
+    function: Callable[[np.ndarray, np.ndarray, Scratch], object],
+    x,
+    out: np.ndarray | None = None,
+    whole: bool = False,
 ) -> np.ndarray:
     """Apply function(source, target, scratch) to x block by block; float64 of the shape of x.
 
     function gets float64 vectors; source and target may be the same memory (out=x) and source is never written to
-    otherwise. A scalar x gives a float64 scalar.
+    otherwise. A scalar x gives a float64 scalar. `whole` is for machine code, which takes short blocks by itself: it
+    gets all of x as one, and scratch of CHUNK values.
     """
     values = np.asarray(x, np.float64)
     if out is None:
@@ -38,9 +43,12 @@ def blockwise(
     elif out.shape != values.shape or out.dtype != np.float64:
         raise ValueError(f"expected out to be float64 of shape {values.shape}, got {out.dtype} of {out.shape}")
     if not out.flags.c_contiguous:
-        out[...] = blockwise(function, values)
+        out[...] = blockwise(function, values, whole=whole)
         return out
     source, target = values.reshape(-1), out.reshape(-1)
+    if whole:
+        function(source, target, Scratch(CHUNK))
+        return out if out.ndim else out[()]
     scratch = Scratch(min(BLOCK, source.size))
     for start in range(0, source.size, BLOCK):
         function(source[start : start + BLOCK], target[start : start + BLOCK], scratch)

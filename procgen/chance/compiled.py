@@ -2,6 +2,7 @@
 
 Imported only where kernels are compiled (numba, the extra `speed`). NumPy makes all 16 lanes of a group, group after
 group; this makes the blocks of four paths that are needed, row after row as they lie in memory, and holds no lock.
+Processors that multiply eight numbers at once (AVX-512) make eight blocks at a time, from products of halves of words.
 `turned` is here as well: rows of steps become rows of paths.
 """
 
@@ -20,6 +21,7 @@ from procgen.chance.kernel import compiled_function
 _M0, _M1 = np.uint64(0xD2E7470EE14C6C93), np.uint64(0xCA5A826395121157)
 _W0, _W1 = np.uint64(0x9E3779B97F4A7C15), np.uint64(0xBB67AE8584CAA73B)
 _ROUNDS = 10
+_LOW, _HALF = np.uint64(0xFFFFFFFF), np.uint64(32)
 _UNIT = 2.0**-52
 _SQUARE = 16  # values: two lines of a cache
 
@@ -49,6 +51,37 @@ def _block(k0, k1, c0, c1, c2):
 
 
 @partial(compiled_function, inline="always")
+def _high_of_halves(a, b):
+    """The same as `_high`, by operations that a processor has for many numbers at once."""
+    low, high = b & _LOW, b >> _HALF
+    across = (a & _LOW) * high + (((a & _LOW) * low) >> _HALF)
+    rest = (a >> _HALF) * low + (across & _LOW)
+    return (a >> _HALF) * high + (across >> _HALF) + (rest >> _HALF)
+
+
+@partial(compiled_function, inline="always")
+def _round(k0, k1, c0, c1, c2, c3):
+    return _high_of_halves(_M1, c2) ^ c1 ^ k0, _M1 * c2, _high_of_halves(_M0, c0) ^ c3 ^ k1, _M0 * c0
+
+
+@partial(compiled_function, inline="always")
+def _block_of_halves(k0, k1, c0, c1, c2):
+    """The same as `_block`, round after round without a loop: then many blocks are made abreast."""
+    c3 = np.uint64(0)
+    c0, c1, c2, c3 = _round(k0, k1, c0, c1, c2, c3)
+    c0, c1, c2, c3 = _round(k0 + np.uint64(1) * _W0, k1 + np.uint64(1) * _W1, c0, c1, c2, c3)
+    c0, c1, c2, c3 = _round(k0 + np.uint64(2) * _W0, k1 + np.uint64(2) * _W1, c0, c1, c2, c3)
+    c0, c1, c2, c3 = _round(k0 + np.uint64(3) * _W0, k1 + np.uint64(3) * _W1, c0, c1, c2, c3)
+    c0, c1, c2, c3 = _round(k0 + np.uint64(4) * _W0, k1 + np.uint64(4) * _W1, c0, c1, c2, c3)
+    c0, c1, c2, c3 = _round(k0 + np.uint64(5) * _W0, k1 + np.uint64(5) * _W1, c0, c1, c2, c3)
+    c0, c1, c2, c3 = _round(k0 + np.uint64(6) * _W0, k1 + np.uint64(6) * _W1, c0, c1, c2, c3)
+    c0, c1, c2, c3 = _round(k0 + np.uint64(7) * _W0, k1 + np.uint64(7) * _W1, c0, c1, c2, c3)
+    c0, c1, c2, c3 = _round(k0 + np.uint64(8) * _W0, k1 + np.uint64(8) * _W1, c0, c1, c2, c3)
+    c0, c1, c2, c3 = _round(k0 + np.uint64(9) * _W0, k1 + np.uint64(9) * _W1, c0, c1, c2, c3)
+    return c0, c1, c2, c3
+
+
+@partial(compiled_function, inline="always")
 def _uniform(word):
     kept = np.int64(word >> np.uint64(12))
     return (np.float64(kept) + 0.5) * _UNIT
@@ -67,9 +100,18 @@ def _ends(path, paths):
     return first, min((path + 3) // 4, end), max((path + paths) // 4, first), end
 
 
-def turned(values, out, first):
-    """Values (steps, paths) into the columns from `first` on of out (paths, steps), a square at a time."""
+def turned(values, out, first, odd):
+    """Values (steps, paths) into the columns from `first` on of out (paths, steps), a square at a time.
+
+    odd: int64, how many are infinite, and how many are not a number.
+    """
     steps, paths = values.shape
+    infinite, unknown = 0, 0
+    for i in range(steps):
+        for j in range(paths):
+            infinite += abs(values[i, j]) == np.inf
+            unknown += values[i, j] != values[i, j]
+    odd[0], odd[1] = infinite, unknown
     for path in range(0, paths, _SQUARE):
         for step in range(0, steps, _SQUARE):
             if path + _SQUARE <= paths and step + _SQUARE <= steps:
@@ -84,6 +126,7 @@ def turned(values, out, first):
 
 def words(k0, k1, step, path, out):
     """The words of the steps and paths from these on, into uint64 out (steps, paths)."""
+    k0, k1 = np.uint64(k0), np.uint64(k1)
     paths = out.shape[1]
     for i in range(out.shape[0]):
         section, place = _position(step + i)
@@ -95,24 +138,32 @@ def words(k0, k1, step, path, out):
                     out[i, at] = four[lane]
 
 
-def uniforms(k0, k1, step, path, out):
-    """The same as uniforms ((word >> 12) + 1/2) 2**-52, into float64 out."""
-    paths = out.shape[1]
-    first, whole, cut, end = _ends(path, paths)
-    for i in range(out.shape[0]):
-        section, place = _position(step + i)
-        row = np.uint64(4) * place
-        for block in range(whole, cut):
-            a, b, c, d = _block(k0, k1, row + np.uint64(block & 3), np.uint64(block >> 2), section)
-            at = 4 * block - path
-            out[i, at] = _uniform(a)
-            out[i, at + 1] = _uniform(b)
-            out[i, at + 2] = _uniform(c)
-            out[i, at + 3] = _uniform(d)
-        for block in range(first, end):
-            if block < whole or block >= cut:
-                four = _block(k0, k1, row + np.uint64(block & 3), np.uint64(block >> 2), section)
-                for lane in range(4):
-                    at = 4 * block + lane - path
-                    if 0 <= at < paths:
-                        out[i, at] = _uniform(four[lane])
+def _uniforms(block):
+    """A function that fills with uniforms by the blocks of a function."""
+
+    def uniforms(k0, k1, step, path, out):
+        """The same as uniforms ((word >> 12) + 1/2) 2**-52, into float64 out."""
+        k0, k1 = np.uint64(k0), np.uint64(k1)
+        paths = out.shape[1]
+        first, whole, cut, end = _ends(path, paths)
+        for i in range(out.shape[0]):
+            section, place = _position(step + i)
+            row, inside = np.uint64(4) * place, out[i, 4 * whole - path :]
+            for j in range(cut - whole):
+                at = whole + j
+                a, b, c, d = block(k0, k1, row + np.uint64(at & 3), np.uint64(at >> 2), section)
+                inside[4 * j] = _uniform(a)
+                inside[4 * j + 1] = _uniform(b)
+                inside[4 * j + 2] = _uniform(c)
+                inside[4 * j + 3] = _uniform(d)
+            for at in range(first, end):
+                if at < whole or at >= cut:
+                    four = _block(k0, k1, row + np.uint64(at & 3), np.uint64(at >> 2), section)
+                    for lane in range(4):
+                        if 0 <= 4 * at + lane - path < paths:
+                            out[i, 4 * at + lane - path] = _uniform(four[lane])
+
+    return uniforms
+
+
+uniforms, uniforms_abreast = _uniforms(_block), _uniforms(_block_of_halves)

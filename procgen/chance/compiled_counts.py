@@ -10,15 +10,14 @@ from functools import partial
 
 import numpy as np
 
+from procgen.chance.counting import LEFT
 from procgen.chance.kernel import compiled_function
 
 _GRID = 2.0**52  # of uniforms
-LEFT = -1.0  # in place of a count that is not found here
-_ABREAST = 512  # counts that are added up side by side
 _TERMS = 8  # chances that are added up before it is asked who needs more
 
 
-@compiled_function
+@partial(compiled_function, inline="always")
 def _taken(u, nothing, wanted, chance, below, places):
     """Uniforms and chances of none into work arrays, and their places; as many as there are."""
     for j in range(u.shape[0]):
@@ -31,7 +30,7 @@ def _taken(u, nothing, wanted, chance, below, places):
         places[j] = j
 
 
-@compiled_function
+@partial(compiled_function, inline="always")
 def _left(k, size, out, count, wanted, each, chance, below, places, at):
     """Add so many counts to out at their places, and move those that need more to the front; how many there are."""
     if k == 0:
@@ -50,7 +49,7 @@ def _left(k, size, out, count, wanted, each, chance, below, places, at):
     return more
 
 
-@compiled_function
+@partial(compiled_function, inline="always")
 def _above_poisson(k, chance, mean, found, most):
     """The chance of more than k, from the chance of k."""
     total, term = 0.0, chance
@@ -64,7 +63,7 @@ def _above_poisson(k, chance, mean, found, most):
     return total
 
 
-@compiled_function
+@partial(compiled_function, inline="always")
 def _above_negative_binomial(k, chance, share, size, found, most):
     total, term = 0.0, chance
     for _ in range(most):
@@ -77,7 +76,7 @@ def _above_negative_binomial(k, chance, share, size, found, most):
     return total
 
 
-@compiled_function
+@partial(compiled_function, inline="always")
 def _rare_poisson(wanted, nothing, mean, climb, rare, near, found, most):
     """The least count that is enough for one uniform, which may be so near to 1 that areas are added from above."""
     chance, below = nothing, nothing
@@ -103,16 +102,15 @@ def _poisson_terms(k, wanted, mean, chance, below):
     return count, chance, below
 
 
-@compiled_function
-def poisson(u, nothing, mean, climb, rare, near, found, most, out):
+def poisson(u, nothing, mean, climb, rare, near, found, most, wanted, each, chance, below, count, places, at, out):
     """The least counts that are enough for uniforms u, from the chances of none.
 
     A few chances are added up for all, then for those that need more: what is added beyond the count changes none.
+    From `wanted` to `at`: work arrays of one length.
     """
-    wanted, each, chance, below, count = np.empty((5, _ABREAST))
-    places, at = np.empty((2, _ABREAST), np.int64)
-    for first in range(0, u.shape[0], _ABREAST):
-        left = min(_ABREAST, u.shape[0] - first)
+    abreast = wanted.shape[0]
+    for first in range(0, u.shape[0], abreast):
+        left = min(abreast, u.shape[0] - first)
         _taken(u[first : first + left], nothing[first : first + left], wanted, chance, below, places)
         for j in range(left):
             each[j] = mean[first + j]
@@ -136,7 +134,7 @@ def poisson(u, nothing, mean, climb, rare, near, found, most, out):
                 )
 
 
-@compiled_function
+@partial(compiled_function, inline="always")
 def _rare_negative_binomial(wanted, nothing, share, size, ratios, climb, rare, near, found, most):
     chance, below = nothing, nothing
     for k in range(climb):
@@ -160,13 +158,13 @@ def _negative_binomial_terms(k, wanted, share, ratios, chance, below):
     return count, chance, below
 
 
-@compiled_function
-def negative_binomial(u, nothing, share, size, ratios, climb, rare, near, found, most, out):
+def negative_binomial(
+    u, nothing, share, size, ratios, climb, rare, near, found, most, wanted, each, chance, below, count, places, at, out
+):
     """The same, of negative binomial counts; share: mean / (mean + size); ratios: (k - 1 + size) / k from k = 1 on."""
-    wanted, each, chance, below, count = np.empty((5, _ABREAST))
-    places, at = np.empty((2, _ABREAST), np.int64)
-    for first in range(0, u.shape[0], _ABREAST):
-        left = min(_ABREAST, u.shape[0] - first)
+    abreast = wanted.shape[0]
+    for first in range(0, u.shape[0], abreast):
+        left = min(abreast, u.shape[0] - first)
         _taken(u[first : first + left], nothing[first : first + left], wanted, chance, below, places)
         for j in range(left):
             each[j] = share[first + j]
@@ -188,12 +186,11 @@ def negative_binomial(u, nothing, share, size, ratios, climb, rare, near, found,
                 )
 
 
-@compiled_function
-def looked_up(u, low, places, shift, first, out):
+def looked_up(u, low, places, shift, first, at, out):
     """The least numbers that are enough for uniforms u, by the guide of a `Table`, or by halves where it is below 0."""
-    last, at = low.shape[0] - 1, np.empty(_ABREAST, np.int64)
-    for begin in range(0, u.shape[0], _ABREAST):
-        given, found = u[begin : begin + _ABREAST], out[begin : begin + _ABREAST]
+    last, abreast = low.shape[0] - 1, at.shape[0]
+    for begin in range(0, u.shape[0], abreast):
+        given, found = u[begin : begin + abreast], out[begin : begin + abreast]
         for i in range(given.shape[0]):
             found[i] = low[min(max(np.int64(np.floor(given[i] * _GRID)) >> shift, 0), last)]
         more = 0
@@ -214,7 +211,6 @@ def looked_up(u, low, places, shift, first, out):
             found[i] = found[i] + first
 
 
-@compiled_function
 def uniforms(z, per_root_12, out):
     """The uniforms that standardised ones were made of."""
     for i in range(z.shape[0]):

@@ -1,7 +1,7 @@
 """exp and log of `elementary`, compiled: a value goes through all operations while it is at hand.
 
 Imported only where kernels are compiled (numba, the extra `speed`). The same operations in the same order as the plain
-form, so that the bits are the same; log is for ordinary numbers only, as there.
+form, so that the bits are the same.
 """
 
 from __future__ import annotations
@@ -65,7 +65,16 @@ def _exp(x):
 
 @partial(compiled_function, inline="always")
 def _log(x):
-    """log x of an ordinary number as in `elementary.log_of`."""
+    """log x as in `elementary.log_of`, and of all that is not an ordinary number, too."""
+    tiny = x < 2.0**-1022
+    found = _log_of_ordinary(x * 2.0**54 if tiny else x)
+    found = found - 54 * _LN2_HIGH - 54 * _LN2_LOW if tiny else found
+    found = found if x < np.inf else x
+    return found if x > 0.0 else -np.inf if x == 0.0 else np.nan
+
+
+@partial(compiled_function, inline="always")
+def _log_of_ordinary(x):
     bits = _bits(x) - _SQRT_HALF_BITS
     k = _float((bits >> 52) + _WHOLE_BITS) - _WHOLE
     f = _float((bits & _MANTISSA) + _SQRT_HALF_BITS) - 1.0
@@ -77,15 +86,24 @@ def _log(x):
     return k * _LN2_HIGH - ((half - r) - f)
 
 
-def exp(x, out):
-    """e**x of float64 vectors; out may be x."""
-    for i in range(x.shape[0]):
-        value = x[i]
-        found = _exp(value)
-        out[i] = found if value == value else np.nan
+def exp(x, out, at_hand):
+    """e**x of float64 vectors; out may be x, so that some values are taken to hand first: they lie apart from both."""
+    chunk = at_hand.shape[0]
+    for first in range(0, x.shape[0], chunk):
+        given, found = x[first : first + chunk], out[first : first + chunk]
+        for i in range(given.shape[0]):
+            at_hand[i] = given[i]
+        for i in range(given.shape[0]):
+            value = _exp(at_hand[i])
+            found[i] = value if at_hand[i] == at_hand[i] else np.nan
 
 
-def log(x, out):
-    """log x of float64 vectors of ordinary numbers; out may be x."""
-    for i in range(x.shape[0]):
-        out[i] = _log(x[i])
+def log(x, out, at_hand):
+    """log x of float64 vectors; out may be x."""
+    chunk = at_hand.shape[0]
+    for first in range(0, x.shape[0], chunk):
+        given, found = x[first : first + chunk], out[first : first + chunk]
+        for i in range(given.shape[0]):
+            at_hand[i] = given[i]
+        for i in range(given.shape[0]):
+            found[i] = _log(at_hand[i])

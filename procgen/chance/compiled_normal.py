@@ -35,7 +35,7 @@ def _far(r):
 
 
 def quantile(u, out, at_hand, tails, r, places):
-    """Quantiles of a float64 vector of numbers from 2**-1022 to 1 - 2**-53; out may be u.
+    """Quantiles of a float64 vector; out may be u.
 
     The others are work arrays of one length, float64 but for `places`, which is int64.
     """

@@ -16,7 +16,7 @@ import numpy as np
 from procgen.chance.blocks import BLOCK
 from procgen.chance.elementary import exp, log, log1p
 from procgen.chance.gamma import STIRLING, log_gamma
-from procgen.chance.kernel import is_compiling
+from procgen.chance.kernel import is_compiling, machine
 from procgen.chance.normal import normal_quantile, normal_tail
 
 Array = np.ndarray
@@ -24,6 +24,8 @@ Ratio = Callable[[Any, Array], Array]
 LARGEST = 2.0**50  # a mean beyond is no count that float64 can hold
 _SMALL = 26.0  # from this mean on a Poisson count is found from its areas
 _CLIMB = 64  # counts that are reached by adding up; the rest is found from areas
+LEFT = -1.0  # in place of a count that is not found by compiled adding up
+_ABREAST = 512  # counts that are added up side by side there
 _STEPS = np.arange(1.0, _CLIMB + 1.0)
 _RARE = 1e-5  # an upper area below is added up by itself, for what is left of 1 has no digits there
 _FOUND = 1e-15
@@ -76,10 +78,11 @@ def _by_blocks(function: Callable[[Array, Array, int], Array], u: Array, mean: A
     times = u.shape[-1] if u.ndim == mean.ndim == 2 and mean.shape == (len(u), 1) else 1
     if not 0 < times <= BLOCK:
         times = 1
-    if times == 1:
+    if times == 1 and u.shape != mean.shape:
         u, mean = np.broadcast_arrays(u, mean)
     out = np.empty(u.shape)
-    flat, uniforms, means, at_once = out.reshape(-1), u.reshape(-1), mean.reshape(-1), BLOCK // times
+    flat, uniforms, means = out.reshape(-1), u.reshape(-1), mean.reshape(-1)
+    at_once = (max(BLOCK, u.size) if is_compiling() else BLOCK) // times  # tiles that are compiled stay in cache
     for start in range(0, len(means), at_once):
         m, part = means[start : start + at_once], slice(start * times, (start + at_once) * times)
         if m.min() >= 0.0 and m.max() <= LARGEST:  # as a rule; not where one is nan
@@ -128,11 +131,13 @@ def _summed(name: str, u: Array, nothing: Array, of: tuple, ratio: Ratio) -> tup
     """`_climbed`, compiled as far as that goes where kernels are compiled; `of` are the numbers in the ratio."""
     if not is_compiling():
         return _climbed(u, nothing, ratio)
-    from procgen.chance import compiled_counts
-
+    if not u.size:
+        return u, np.empty(0, np.int64)
     out = np.empty(u.shape)
-    getattr(compiled_counts, name)(u, nothing, *of, _CLIMB, 1.0 - _RARE, 1.0 - 10.0 * _RARE, _FOUND, _MOST_TERMS, out)
-    return out, np.flatnonzero(out == compiled_counts.LEFT)
+    work = [*(np.empty(_ABREAST) for _ in range(5)), *(np.empty(_ABREAST, np.int64) for _ in range(2))]
+    limits = _CLIMB, 1.0 - _RARE, 1.0 - 10.0 * _RARE, _FOUND, _MOST_TERMS
+    machine("compiled_counts", name)(u, nothing, *of, *limits, *work, out)
+    return out, np.flatnonzero(out == LEFT) if out.min() == LEFT else np.empty(0, np.int64)
 
 
 def _climbed(u: Array, nothing: Array, ratio: Ratio) -> tuple[Array, Array]:

@@ -11,7 +11,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from procgen.chance.blocks import Scratch, blockwise
+from procgen.chance.blocks import CHUNK, Scratch, blockwise
 from procgen.chance.kernel import is_compiling, machine
 
 _LN2_HIGH, _LN2_LOW = 6.93147180369123816490e-01, 1.90821492927058770002e-10
@@ -62,12 +62,12 @@ _MANTISSA = 0x000FFFFFFFFFFFFF
 
 def exp(x, out: np.ndarray | None = None) -> np.ndarray:
     """e**x, elementwise, within 1 ulp; inf above 709.78, 0 below -745.13, nan for nan."""
-    return blockwise(_exp, x, out)
+    return blockwise(_exp, x, out, whole=is_compiling())
 
 
 def log(x, out: np.ndarray | None = None) -> np.ndarray:
     """The natural logarithm, elementwise, within 1 ulp; -inf at 0, nan below 0."""
-    return blockwise(_log, x, out)
+    return blockwise(_log, x, out, whole=is_compiling())
 
 
 def log1p(x, out: np.ndarray | None = None) -> np.ndarray:
@@ -110,7 +110,7 @@ def horner(coefficients: tuple[float, ...], x: np.ndarray, out: np.ndarray) -> n
 
 def _exp(x: np.ndarray, out: np.ndarray, scratch: Scratch) -> None:
     if is_compiling():
-        machine("compiled_elementary", "exp")(x, out)
+        machine("compiled_elementary", "exp")(x, out, scratch(0, CHUNK))
         return
     times_exp(1.0, x, 0.0, out, scratch)
 
@@ -152,10 +152,10 @@ def times_exp(
 
 
 def _log(x: np.ndarray, out: np.ndarray, scratch: Scratch) -> None:
-    if not (is_compiling() and x.size and x.min() >= 2.0**-1022 and x.max() < np.inf):
-        log_of(x, out, scratch)
+    if is_compiling():
+        machine("compiled_elementary", "log")(x, out, scratch(0, CHUNK))
         return
-    machine("compiled_elementary", "log")(x, out)
+    log_of(x, out, scratch)
 
 
 def log_of(x: np.ndarray, out: np.ndarray, scratch: Scratch) -> None:
@@ -186,7 +186,7 @@ def _log1p(x: np.ndarray, out: np.ndarray, scratch: Scratch) -> None:
     above, less, result = scratch(6, n), scratch(7, n), scratch(8, n)
     np.add(x, 1.0, out=above)
     np.subtract(above, 1.0, out=less)
-    _log(above, result, scratch)
+    _log(above, result, Scratch(CHUNK) if is_compiling() else scratch)
     same = np.flatnonzero((less == 0.0) | (above == np.inf))
     less[same] = 1.0
     with np.errstate(invalid="ignore"):

@@ -32,7 +32,7 @@ from typing import Any, Literal
 import numpy as np
 
 from procgen.chance.abreast import abreast, by_step, kind_of, moved, passed
-from procgen.chance.machine import Machine, write
+from procgen.chance.machine import Machine, multiplies_eight, write
 
 _NARROW = 256  # paths: with more, the compiled form takes all of them at each step (measured: 2-4 against 10 ns)
 _compiling: ContextVar[bool] = ContextVar("compiling", default=False)
@@ -235,10 +235,15 @@ def machine(module: str, function: str, room: str = __package__) -> Machine:
     return Machine(f"{module}.{function}", text, given, cache_folder)
 
 
+@cache
+def uniforms() -> Machine:
+    """What fills with uniforms quickest here."""
+    return machine("compiled", "uniforms_abreast" if multiplies_eight() else "uniforms")
+
+
 def are_kept() -> bool:
     """Whether the kernels that nearly all draws need are kept as machine code here."""
-    key, nothing = np.uint64(0), np.empty((0, 0))
-    return machine("compiled", "uniforms").is_kept(key, key, 0, 0, nothing)
+    return uniforms().is_kept(0, 0, 0, 0, np.empty((0, 0)))
 
 
 def compiled_function(function: Callable, inline: Literal["never", "always"] = "never") -> Callable:

@@ -8,11 +8,10 @@ from __future__ import annotations
 
 import numpy as np
 
-from procgen.chance.blocks import Scratch, blockwise
+from procgen.chance.blocks import CHUNK, Scratch, blockwise
 from procgen.chance.elementary import horner, log_of, times_exp
 from procgen.chance.kernel import is_compiling, machine
 
-_CHUNK = 1024  # values that are at hand in the compiled form while their tails are done
 _FAR = 40.0  # the tail area beyond is below the smallest float64
 _TOP_BITS = np.int64(-(2**27))  # keeps 26 significant bits: their square is exact
 _TAIL = (  # F as a polynomial in t = (x - 5) / (x + 5), from a 60-digit Chebyshev fit
@@ -51,7 +50,7 @@ def normal_quantile(u, out: np.ndarray | None = None) -> np.ndarray:
 
     Wichura (1988), Algorithm AS 241, PPND16: about 1 part in 1e16, from the tail area min(u, 1 - u) and its side.
     """
-    return blockwise(_normal_quantile, u, out)
+    return blockwise(_compiled, u, out, whole=True) if is_compiling() else blockwise(_normal_quantile, u, out)
 
 
 def normal_tail(x, out: np.ndarray | None = None) -> np.ndarray:
@@ -172,12 +171,13 @@ _FAR_BELOW = (
 )
 
 
+def _compiled(u: np.ndarray, out: np.ndarray, scratch: Scratch) -> None:
+    work = [scratch(i, CHUNK) for i in range(3)]
+    machine("compiled_normal", "quantile")(u, out, *work, scratch(0, CHUNK, np.int64))
+
+
 def _normal_quantile(u: np.ndarray, out: np.ndarray, scratch: Scratch) -> None:
     n = len(u)
-    if is_compiling() and n and u.min() >= 2.0**-1022 and u.max() < 1.0:
-        work = [scratch(i, min(n, _CHUNK)) for i in (6, 7, 8)]
-        machine("compiled_normal", "quantile")(u, out, *work, scratch(0, min(n, _CHUNK), np.int64))
-        return
     q, r, top, below = (scratch(i, n) for i in (6, 7, 8, 9))
     np.subtract(u, 0.5, out=q)
     np.subtract(0.180625, np.multiply(q, q, out=r), out=r)

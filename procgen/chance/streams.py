@@ -12,12 +12,12 @@ counted backwards, step -1 first, so that a longer past moves nothing.
 from __future__ import annotations
 
 from dataclasses import dataclass
-from functools import cached_property
+from functools import cached_property, partial
 from hashlib import sha256
 
 import numpy as np
 
-from procgen.chance.kernel import is_compiling, machine
+from procgen.chance.kernel import is_compiling, machine, uniforms
 
 STREAM_VERSION = 1
 LANES = 16
@@ -137,8 +137,8 @@ class _Plain:
 def _compiled(key: tuple[int, int], first_path: int, first_step: int, out: np.ndarray) -> None:
     """The same filling by `procgen.chance.compiled`."""
     made = np.ascontiguousarray(out)
-    fill = machine("compiled", "uniforms" if out.dtype == np.float64 else "words")
-    fill(*map(np.uint64, key), first_step, first_path, made)
+    fill = uniforms if out.dtype == np.float64 else partial(machine, "compiled", "words")
+    fill()(*key, first_step, first_path, made)
     if made is not out:
         out[...] = made
 

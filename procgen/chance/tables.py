@@ -14,11 +14,11 @@ from typing import Any
 
 import numpy as np
 
-from procgen.chance.blocks import Scratch, blockwise
+from procgen.chance.blocks import CHUNK, Scratch, blockwise
 from procgen.chance.counting import negative_binomial, poisson
 from procgen.chance.elementary import exp, log, log1p
 from procgen.chance.gamma import log_gamma
-from procgen.chance.kernel import is_compiling
+from procgen.chance.kernel import is_compiling, machine
 
 Array = np.ndarray
 GRID = 2.0**52
@@ -33,14 +33,12 @@ _LEAST = 2.0**-70  # a chance that no uniform sees, far from the likely ones
 
 def uniforms(z: Array) -> Array:
     """The uniforms that standardised ones of the law `uniform` were made of, exactly."""
-    return blockwise(_uniforms, z)
+    return blockwise(_uniforms, z, whole=is_compiling())
 
 
 def _uniforms(z: Array, out: Array, scratch: Scratch) -> None:
     if is_compiling():
-        from procgen.chance import compiled_counts
-
-        compiled_counts.uniforms(z, _PER_ROOT_12, out)
+        machine("compiled_counts", "uniforms")(z, _PER_ROOT_12, out)
         return
     place = np.add(np.floor(np.multiply(z, GRID * _PER_ROOT_12, out=out), out=out), 2.0**51, out=out)
     np.minimum(np.maximum(place, 0.0, out=out), GRID - 1.0, out=out)
@@ -72,7 +70,7 @@ class Table:
 
     def counts(self, u: Array) -> Array:
         """The least numbers that are enough for uniforms u, as float64: by a guide (Chen & Asau 1974) or a search."""
-        return blockwise(self._looked_up, u)
+        return blockwise(self._looked_up, u, whole=is_compiling())
 
     def few(self, u: Array) -> Array:
         """`counts` of uniforms that are too few for a guide to repay."""
@@ -82,9 +80,8 @@ class Table:
     def _looked_up(self, u: Array, out: Array, scratch: Scratch) -> None:
         n = len(u)
         if is_compiling():
-            from procgen.chance import compiled_counts
-
-            compiled_counts.looked_up(u, self.guide, self.places, _SHIFT, self.first, out)
+            at = scratch(0, CHUNK, np.int64)
+            machine("compiled_counts", "looked_up")(u, self.guide, self.places, _SHIFT, self.first, at, out)
             return
         place, cell = scratch(0, n, np.int64), scratch(1, n, np.int64)
         np.copyto(place, np.floor(np.multiply(u, GRID, out=out), out=out), casting="unsafe")

@@ -16,7 +16,8 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from procgen.checks.blocks import compiled, in_one_pass, scratch
+from procgen.chance.kernel import is_compiling
+from procgen.checks.blocks import BLOCK, in_few, in_one_pass, scratch
 from procgen.checks.verdict import Check
 
 STUCK, COPIED = "values that stay", "copied stretches"
@@ -156,8 +157,9 @@ class Watch:
 
     def absorb(self, x: NDArray) -> None:
         """Look at the next tile (steps, paths)."""
-        if compiled(x.shape[1]):
-            self._compiled(np.ascontiguousarray(x))
+        if is_compiling():
+            run = self._compiled if x.shape[1] > 1 else self._alone
+            run(np.ascontiguousarray(x))
         else:
             rows = np.concatenate([self.before, x])
             same = rows[self.length - 1 :] == rows[self.length - 2 : -1]
@@ -176,6 +178,19 @@ class Watch:
         count = int(counted[0])
         path, step = self.first_path + room.paths[:count], self.step + room.steps[:count]
         self._keep(Marks(room.hashes[:count].copy(), room.values[:count].copy(), path, step))
+
+    def _alone(self, x: NDArray) -> None:
+        """The same for one path."""
+        room = [scratch(1, x.size, 5 + k)[0].view(kind) for k, kind in enumerate((np.uint64, np.float64, np.int64))]
+        mixed, found = scratch(1, 2 * BLOCK, 8)[0].view(np.uint64), np.empty(2, np.int64)
+        in_few("marked", self.before[:, 0].copy(), x[:, 0], self.ends, _MIX, *room, mixed, found)
+        count = int(found[0])
+        hashes, values, steps = (each[:count].copy() for each in room)
+        self._keep(Marks(hashes, values, np.full(count, self.first_path), self.step + steps))
+        if found[1]:
+            self._follow(x, (x[:, 0] == np.concatenate([self.before[-1], x[:-1, 0]])).astype(np.int64))
+        else:
+            self.run[:] = 1
 
     def _follow(self, x: NDArray, some: NDArray[np.int64]) -> None:
         """Go on with runs over the steps of a tile; `some`: how many paths have the value of the step before."""

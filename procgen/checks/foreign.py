@@ -14,7 +14,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
-from procgen.checks import filled, handled, judge, ordered
+from procgen.checks import filled, handled, judge, ordered, sizes
 from procgen.checks.blocks import GROUP
 from procgen.checks.clock import ClockError, NoTime, Times, mismatch, refuse_numbers, steps_on_grid
 from procgen.checks.files import TableError, read_file
@@ -92,21 +92,13 @@ class Table:
                 f"is the right column taken for the step? {option('step')}"
             )
         self.rows = self.paths * self.steps
-        short = _absent_steps(self.steps, spec.time.steps)
-        if short:
-            self._assumed.insert(0, short)
-            self._say("steps", short, "reported")
         if names.path is None and len(np.unique(step)) < len(step):
             raise TableError(
                 f"{where}: steps repeat, and there is no column path; {listed('path', names.found)}; "
                 f"{option('path')}"
             )
-        stated = self.spec.paths
-        if self.paths != stated:
-            more = f"{many(self.paths, 'path')}, where the spec states {stated:,}: judged on those that are there"
-            self._say("paths", more, "reported")
-            fewer, other = f"{self.paths:,} of the {many(stated, 'path')} stated", many(self.paths, "path")
-            self._assumed.append(fewer if self.paths < stated else f"{other}, {stated:,} stated")
+        self._checks += sizes.checks(self.paths, self.steps, spec)
+        self._assumed += sizes.told(self.paths, self.steps, spec)
         self._place(path, step)
         self._values = {name: self._numbers(frame[column], name) for name, column in names.series.items()}
 
@@ -333,17 +325,6 @@ def _cell(column: pd.Series, row: int) -> str:
 
 def _steps(first: int, last: int) -> str:
     return f"step {first}" if first == last else f"steps {first} to {last:,}"
-
-
-def _absent_steps(steps: int, stated: int) -> str:
-    """What is said where the last steps of a spec are in no path of a table, or a table has more of them."""
-    if steps == stated:
-        return ""
-    if steps > stated:
-        more = f"step {stated} is" if steps == stated + 1 else f"steps {stated}–{steps - 1} are"
-        return f"{more} beyond the {many(stated, 'step')} of the spec; judged on all {steps:,}"
-    last = f"step {steps} is" if steps == stated - 1 else f"steps {steps}–{stated - 1} are"
-    return f"{last} absent; judged on {many(steps, 'step')}"
 
 
 def _looks_like_times(column: pd.Series) -> bool:

@@ -12,6 +12,8 @@ import numpy as np
 from procgen.chance.kernel import compiled_function
 
 BLOCK, STRETCH = 64, 16  # steps, as in `blocks` and `stretches`
+SOME = 64  # values whose marks are looked for at once
+_EXPONENT = np.uint64(0x7FF << 52)
 _part = partial(compiled_function, inline="always")
 
 
@@ -205,3 +207,65 @@ def in_turn(row, values, first, width):
             for s in range(t, stop):
                 row[k] += values[s]
             t = stop
+
+
+def looked(x, first_step, prints, found):
+    """Add the fingerprint of one path's values to prints; found: how many are 0, and how many not finite."""
+    bits, total, zeros, wild = x.view(np.uint64), np.uint64(0), 0, 0
+    for t in range(x.shape[0]):
+        w = np.uint64(first_step + t) * np.uint64(0x9E3779B97F4A7C15) + np.uint64(0x632BE59BD9B4E019)
+        w = (w ^ (w >> np.uint64(30))) * np.uint64(0xBF58476D1CE4E5B9)
+        w = (w ^ (w >> np.uint64(27))) * np.uint64(0x94D049BB133111EB)
+        w = (w ^ (w >> np.uint64(31))) | np.uint64(1)
+        total += (bits[t] ^ (bits[t] >> np.uint64(32))) * w
+    for t in range(x.shape[0]):
+        zeros += (bits[t] << np.uint64(1)) == 0
+        wild += (bits[t] & _EXPONENT) == _EXPONENT
+    prints[0] += total
+    found[0], found[1] = zeros, wild
+
+
+def marked(before, x, ends, mix, hashes, values, steps, mixed, found):
+    """Fill in the marks of stretches that end in x, of one path; `before`: the values of a stretch before x.
+
+    found: how many marks, and how many values that equal the one before. mixed: room for SOME values and two more.
+    """
+    reach, bits, bits_before, count, same = before.shape[0], x.view(np.uint64), before.view(np.uint64), 0, 0
+    mixed[SOME], mixed[SOME + 1] = bits_before[reach - 2] * mix[0], bits_before[reach - 1] * mix[0]
+    for begin in range(0, x.shape[0], SOME):
+        n, least = min(SOME, x.shape[0] - begin), np.uint64(2**64 - 1)
+        mixed[0], mixed[1] = mixed[SOME], mixed[SOME + 1]
+        for k in range(n):
+            mixed[k + 2] = bits[begin + k] * mix[0]
+        for k in range(n):
+            least = min(least, mixed[k + 2] ^ (mixed[k + 1] >> np.uint64(1)) ^ (mixed[k] >> np.uint64(2)))
+        for k in range(n if least <= ends else 0):
+            if mixed[k + 2] ^ (mixed[k + 1] >> np.uint64(1)) ^ (mixed[k] >> np.uint64(2)) > ends:
+                continue
+            t = begin + k
+            first = x[t - reach] if t >= reach else before[t]
+            known, total = first != x[t], np.uint64(0)
+            for s in range(t - reach, t + 1):
+                value = x[s] if s >= 0 else before[reach + s]
+                known = known and np.isfinite(value)
+                bits_of = np.float64(value).view(np.uint64)
+                total = (total ^ bits_of ^ (bits_of >> np.uint64(32))) * mix[1]
+                total ^= total >> np.uint64(29)
+            if known:
+                hashes[count], values[count], steps[count] = total, x[t], t
+                count += 1
+    for t in range(1, x.shape[0]):
+        same += x[t] == x[t - 1]
+    found[0], found[1] = count, same + (x[0] == before[reach - 1])
+
+
+def dithered(first_path, first_step, salt, paths, out):
+    """Fill (steps, paths), in one row, with the numbers of `recover.dither`."""
+    for t in range(out.shape[0] // paths):
+        of_step = np.uint64(first_step + t) * np.uint64(0x9E3779B97F4A7C15) + salt
+        for p in range(paths):
+            x = of_step + np.uint64(first_path + p) * np.uint64(0xD1B54A32D192ED03)
+            x = (x ^ (x >> np.uint64(30))) * np.uint64(0xBF58476D1CE4E5B9)
+            x = (x ^ (x >> np.uint64(27))) * np.uint64(0x94D049BB133111EB)
+            x ^= x >> np.uint64(31)
+            out[t * paths + p] = np.float64(np.int64(x >> np.uint64(11))) * 2.0**-53 - (0.5 - 2.0**-54)

@@ -18,6 +18,7 @@ from procgen.checks import rounding
 from procgen.checks.pools import Pool, noise, plan_pool
 from procgen.checks.saddle import summand
 from procgen.checks.scores import Scores
+from procgen.theory.lumps import atoms_of, chance_of
 from procgen.theory.mixedlaw import Normal
 
 PAIR_LIMIT = 36  # pairs of series that are compared
@@ -25,6 +26,8 @@ _HUGE = 1e9  # times the size of a series
 NOTHING = 1e-24  # of the largest variance of a series: a step with less is certain
 _NEVER = 1e-9  # chance of what may be left out
 _RARE = 9.0  # the kurtosis, that of the exponential law, beyond which a few rare values make most of the spread
+_LEAST = 1e-15  # probability in either tail of a law on a lattice that is left out
+_VALUES = 4096  # of a law that are summed one by one
 
 
 def probe_steps(steps: int) -> tuple[int, ...]:
@@ -151,6 +154,18 @@ class Marginal:
 
     def distribution(self) -> Marginal:
         return self
+
+    @cached_property
+    def lumps(self) -> tuple[NDArray, NDArray]:
+        """The values with a chance of their own, and these chances; of very many values none."""
+        spacing = getattr(self.frozen, "spacing", 0.0)
+        x = np.array(atoms_of(self.frozen))
+        if spacing:
+            first, last = (float(self.frozen.ppf(p)) for p in (_LEAST, 1.0 - _LEAST))
+            x = first + spacing * np.arange(round((last - first) / spacing) + 1.0)
+        if not 0 < len(x) <= _VALUES:
+            return np.zeros(0), np.zeros(0)
+        return (x - self.mean) / self.sd, np.asarray(chance_of(self.frozen, x), float)
 
     def cdf(self, z: NDArray) -> NDArray:
         return self.frozen.cdf(self.mean + self.sd * np.asarray(z))

@@ -13,6 +13,8 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.chance.kernel import is_compiling
+from procgen.checks.blocks import in_few
 from procgen.checks.few import Few, few_of
 from procgen.checks.kalman import Kalman
 from procgen.checks.scores import Scores
@@ -136,10 +138,14 @@ def dither(first_path: int, paths: int, first_step: int, steps: int, series: str
 
     Series must not share them: what is spread alike would look correlated.
     """
+    salt = np.uint64(zlib.crc32(series.encode()) * 0x8CB92BA72F3D8DD7 % 2**64)
+    if is_compiling():
+        out = np.empty((steps, paths))
+        in_few("dithered", first_path, first_step, salt, paths, out.reshape(-1))
+        return out
     step = np.arange(first_step, first_step + steps, dtype=np.uint64)[:, None]
     path = np.arange(first_path, first_path + paths, dtype=np.uint64)[None, :]
-    x = step * np.uint64(0x9E3779B97F4A7C15) + path * np.uint64(0xD1B54A32D192ED03)
-    x += np.uint64(zlib.crc32(series.encode()) * 0x8CB92BA72F3D8DD7 % 2**64)
+    x = step * np.uint64(0x9E3779B97F4A7C15) + path * np.uint64(0xD1B54A32D192ED03) + salt
     for shift, factor in ((30, 0xBF58476D1CE4E5B9), (27, 0x94D049BB133111EB)):
         x ^= x >> np.uint64(shift)
         x *= np.uint64(factor)

@@ -21,6 +21,8 @@ from procgen.checks.judge import Finding
 REACH = 5.0  # standard errors: a sum is not judged where one number alone may carry it that far
 _NODES = 1024
 _LAST = 7.5  # normal score of the outermost node: what lies beyond has a probability of 6e-14
+_LEAST = 1e-12  # probability between two lumps that is but rounding
+_NONE = np.zeros(0)
 _NEAR = 1e-3  # this near to the middle the formula is 0/0, and its limit is taken
 _STEPS = 100
 _STEEPEST = 1e3
@@ -100,13 +102,25 @@ def _tail(r: float, u: float) -> float:
 
 
 def summand(distribution: Any, of: Callable[[NDArray], NDArray], farthest: float = math.inf) -> Summand:
-    """What `of` makes of a continuous law with `ppf`, as nodes and weights; sizes beyond `farthest` are left out."""
+    """What `of` makes of a law with `ppf`, as nodes and weights; sizes beyond `farthest` are left out.
+
+    Values with a chance of their own, where the law tells them (`lumps`: values and chances), are nodes with that
+    chance; what is continuous lies between them.
+    """
     from scipy.special import ndtr
 
     g = np.linspace(-_LAST, _LAST, _NODES + 1)
-    values = of(np.asarray(distribution.ppf(ndtr(g)), dtype=float))
+    u, density = ndtr(g), np.exp(-0.5 * g**2)
+    lumps, chances = getattr(distribution, "lumps", (_NONE, _NONE))
+    upto = np.asarray(distribution.cdf(lumps), float) if lumps.size else _NONE
+    nodes, weights = [lumps], [chances]
+    for low, high in zip(np.append(0.0, upto), np.append(upto - chances, 1.0), strict=True):
+        if high - low > _LEAST:
+            nodes.append(np.asarray(distribution.ppf(low + (high - low) * u), dtype=float))
+            weights.append((high - low) * density / density.sum())
+    values, weight = of(np.concatenate(nodes)), np.concatenate(weights)
     usable = np.isfinite(values) & (np.abs(values) <= farthest)
-    return Summand(values[usable], np.exp(-0.5 * g[usable] ** 2))
+    return Summand(values[usable], weight[usable])
 
 
 def sum_finding(z: float, n: int, law: Summand, error: float, theory: float = 0.0) -> Finding:

@@ -7,6 +7,7 @@ from collections.abc import Mapping
 from pathlib import Path
 from typing import Any, Protocol
 
+from procgen.checks import sizes
 from procgen.checks.foreign import TableError
 from procgen.checks.gather import Gather
 from procgen.checks.lane import in_one_process
@@ -103,7 +104,8 @@ class EnsembleOrigin:
     def checks(self) -> list[Check]:
         from procgen.checks.parameters import parameter_checks
 
-        return [*parameter_checks(self.ensemble, self.spec)]
+        sizes_of = sizes.checks(self.ensemble.whole.paths, self.steps, self.spec)
+        return [*parameter_checks(self.ensemble, self.spec), *sizes_of]
 
     def about(self) -> dict[str, Any]:
         """Title, digest and size, for the report."""
@@ -117,6 +119,7 @@ class EnsembleOrigin:
             "spec_digest": self.spec.digest(),
             "where": str(self.ensemble.path) if manifest is not None else None,
             "spec_file": self.spec_file,
+            "judged_on": "; ".join(sizes.told(whole.paths, whole.steps, self.spec)),
         }
 
     def gathered(self, workers: int | None, progress: Progress | None, scheduler: str | None = None) -> Gather:

@@ -338,7 +338,7 @@ class Structure:
 
 def _unlikely(count: int, expected: float) -> bool:
     """Whether so many rarities are no chance: at least n of them have a chance of at most expected^n / n!."""
-    return count * math.log(expected) - math.lgamma(count + 1) < math.log(_CERTAIN)
+    return count * math.log(max(expected, 1e-300)) - math.lgamma(count + 1) < math.log(_CERTAIN)
 
 
 def _note(book: dict[str, list[int]], name: str, where: NDArray, first_path: int, first_step: int) -> None:

@@ -56,10 +56,9 @@ class Drawer:
             start = step - block.first_step
             for column in self.source.columns:
                 values = tile[column.name]
-                wrong = np.isinf(values) if column.gaps else ~np.isfinite(values)
-                if wrong.any():
-                    raise _not_finite(column, values, wrong, block.first_path, step)
-                turn(values, out[column.name], start)
+                infinite, unknown = turn(values, out[column.name], start)
+                if infinite or (unknown and not column.gaps):
+                    raise _not_finite(column, values, block.first_path, step)
             step += steps
             self.tick(block.paths * steps)
 
@@ -104,12 +103,17 @@ def repays(source: Source, narrow_steps: int, share: int) -> bool:
     return share > least or narrow_steps > (LOADING_REPAYS if kept else COMPILING_REPAYS)
 
 
-def turn(values: np.ndarray, out: np.ndarray, start: int) -> None:
-    """Values (steps, paths) into the columns from `start` on of out (paths, steps)."""
+def turn(values: np.ndarray, out: np.ndarray, start: int) -> tuple[int, int]:
+    """Values (steps, paths) into the columns from `start` on of out (paths, steps).
+
+    How many are infinite, and how many are not a number, is returned.
+    """
     if kernel.is_compiling() and values.flags.c_contiguous and out.flags.c_contiguous:
-        kernel.machine("compiled", "turned")(values, out, start)
-    else:
-        out[:, start : start + len(values)] = values.T
+        odd = np.empty(2, np.int64)
+        kernel.machine("compiled", "turned")(values, out, start, odd)
+        return int(odd[0]), int(odd[1])
+    out[:, start : start + len(values)] = values.T
+    return int(np.count_nonzero(np.isinf(values))), int(np.count_nonzero(np.isnan(values)))
 
 
 def _reuse_memory() -> None:
@@ -122,10 +126,8 @@ def _reuse_memory() -> None:
     np.empty(REUSED, np.uint8)  # never written to, so that it is no memory
 
 
-def _not_finite(
-    column: Column, values: np.ndarray, wrong: np.ndarray, first_path: int, first_step: int
-) -> EnsembleError:
-    step, path = np.argwhere(wrong)[0]
+def _not_finite(column: Column, values: np.ndarray, first_path: int, first_step: int) -> EnsembleError:
+    step, path = np.argwhere(np.isinf(values) if column.gaps else ~np.isfinite(values))[0]
     where = f"series {column.name}: the value at path {first_path + path}, step {first_step + step}"
     if np.isnan(values[step, path]):
         return EnsembleError(

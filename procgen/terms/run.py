@@ -50,7 +50,9 @@ class Run:
         at = np.arange(self.step, self.step + steps)
         values, self._states = self._advance(self._order, at)
         self.step += steps
-        return {name: np.broadcast_to(values[id(node)], (steps, self.paths)) for name, node in self.columns.items()}
+        shape = (steps, self.paths)
+        found = {name: values[id(node)] for name, node in self.columns.items()}
+        return {name: rows if rows.shape == shape else np.broadcast_to(rows, shape) for name, rows in found.items()}
 
     def state(self) -> dict[str, Array]:
         """The carried state after the last tile, flat, by name."""

@@ -61,7 +61,10 @@ EXEMPT_PLACES = {
     ("spec/local.py", "places"),  # a running sum of whole numbers
 }
 # Who may reach the compiler; all others compile by `compiled_function`, which allows no fused or reordered operation.
-COMPILERS = {f"chance/{name}.py" for name in ("kernel", "machine", "compiled", "compiled_elementary")}
+COMPILERS = {
+    f"chance/{name}.py"
+    for name in ("kernel", "machine", "passing", "compiled", "compiled_elementary", "compiled_passing")
+}
 
 ELEMENTARY = set(
     "exp exp2 expm1 log log2 log10 log1p logaddexp logaddexp2 sin cos tan arcsin arccos arctan arctan2 asin acos atan "

@@ -73,6 +73,29 @@ def test_what_needs_numba_when_it_runs_is_left_to_it(tmp_path, function, kept):
     assert np.array_equal(out, 4 * x)
 
 
+def seen(x, k, out):
+    out[0] = x.size
+    out[1] = x.ndim
+    out[2] = k
+    for i in range(x.shape[0]):
+        out[3] += x.flat[i]
+
+
+def test_arrays_are_told_apart_at_each_call(tmp_path):
+    """By machine code or by numba: whatever the call before was for."""
+    made = Machine("made", "text", lambda: seen, lambda: tmp_path)
+    frozen = np.arange(6.0)
+    frozen.flags.writeable = False
+    odd = np.frombuffer(b"\0" * 3 + np.arange(2.0).tobytes(), np.float64, offset=3)  # not aligned
+    own = np.arange(7.0).view(np.dtype("f8", metadata={"a": 1}))  # a data type that is an object of its own
+    arrays = [np.arange(3.0), np.arange(4), np.ones((2, 3)), np.arange(5, dtype=np.uint64), frozen, odd, own]
+    for x in [*arrays, *(row[::2] for row in arrays[:2]), *arrays]:
+        for k in (1, 2.5, np.int64(3), np.float64(4.5), -(2**60)):
+            out = np.zeros(4)
+            made(x, k, out)
+            assert out.tolist() == [x.size, x.ndim, k, x.reshape(-1)[: x.shape[0]].sum()]
+
+
 def test_a_damaged_file_is_made_again(tmp_path):
     x, out = np.arange(5.0), np.empty(5)
     Machine("made", "text", lambda: halves, lambda: tmp_path)(x, (0.5, 1.0), out)

@@ -99,6 +99,21 @@ def test_another_spec_is_held_against_it(out):
         validate(out, read_spec(wrong))
 
 
+def test_other_numbers_of_paths_and_steps_than_stated_are_told_as_of_a_table(out, tmp_path):
+    """Of an ensemble on disk, of one in memory and of the table that it is, in the same words."""
+    found = open_ensemble(out)
+    larger = read_spec({**found.spec.raw, "paths": 1000, "time": {"steps": found.spec.time.steps + 5}})
+    steps, paths = found.whole.steps, found.whole.paths
+    said = f" (steps {steps}–{steps + 4} are absent; judged on {steps} steps; {paths} of the 1,000 paths stated)"
+    for data in (out, found, render(found.spec), found.to_pandas()):
+        verdict = validate(data, larger)
+        assert verdict.title.endswith(said)
+        rows = {row.what: row.note for row in verdict.rows if row.outcome == "reported"}
+        assert rows["paths"] == f"{paths} paths, where the spec states 1,000: judged on those that are there"
+        assert rows["steps"].startswith(f"steps {steps}–{steps + 4} are absent")
+    assert validate(out).title.endswith("spec states")
+
+
 def test_false_alarm_must_be_a_probability(out):
     with pytest.raises(ValueError, match="between 0 and 1, got 2"):
         validate(out, false_alarm=2)

@@ -9,6 +9,7 @@ from procgen.checks import lane as room
 from procgen.checks.blocks import WIDE, add_lags, add_products
 from procgen.checks.copies import Repeats, Watch
 from procgen.checks.lane import Pass
+from procgen.checks.recover import dither
 from procgen.checks.scores import Scores
 from procgen.checks.shocks import MEMORY_LAGS, SHOCK_ARRAYS, ShockSums
 from procgen.checks.structure import _looked
@@ -87,7 +88,7 @@ def test_sums_of_shocks(monkeypatch, law, cuts, paths, period):
 
 @needs_numba
 @pytest.mark.parametrize("cuts", CUTS)
-@pytest.mark.parametrize("paths", [1, 32, 257])
+@pytest.mark.parametrize("paths", [1, 2, 17, 32, 257])
 def test_marks_and_runs_of_values(cuts, paths):
     x = np.round(RNG.standard_normal((400, paths)), 3)
     x[100:105, 0] = x[100, 0]  # a value that stays, marked nowhere
@@ -104,6 +105,12 @@ def test_marks_and_runs_of_values(cuts, paths):
     plain, compiled = both(run)
     same(plain, compiled)
     assert plain["longest"][0] >= 4 and len(plain["hashes"]) > 5 * paths
+
+
+@needs_numba
+@pytest.mark.parametrize("paths", [1, 3, 64])
+def test_what_spreads_values_over_their_cells(paths):
+    same(*both(lambda: {"dither": dither(5, paths, 2**33, 70, "x")}))
 
 
 @needs_numba

@@ -35,8 +35,34 @@ def test_skewness_of_a_path_s_average_product_against_its_exact_law(share):
     series = plan_of(spec_of([{"flag": {"share": share}}], 150, 60, 1)).series[0]
     # Products of independent deviations of a flag, each of them with moments of the Bernoulli law (scipy.stats).
     skew = float(stats.bernoulli(share).stats("s"))
-    assert _hidden(series, series.pool, 1) == pytest.approx(skew**2 / math.sqrt(59), rel=0.02)
-    assert _hidden(series, series.pool, -1) == pytest.approx(skew / math.sqrt(60), rel=0.02)
+    assert _hidden(series, series.pool, 1) == pytest.approx(skew**2 / math.sqrt(59), rel=1e-9)
+    assert _hidden(series, series.pool, -1) == pytest.approx(skew / math.sqrt(60), rel=1e-9)
+
+
+@pytest.mark.parametrize(
+    ("body", "law"),
+    [
+        (POISSON, stats.poisson(0.02)),
+        ([{"negative_binomial": {"mean": 2, "size": 1.5}}], stats.nbinom(1.5, 1.5 / 3.5)),
+        ([{"poisson": {"mean": 900}}], stats.poisson(900)),
+    ],
+    ids=["rare counts", "negative binomial", "many counts"],
+)
+def test_skewness_of_counts_and_of_their_squares_against_sums_over_their_values(body, law):
+    """Central moments summed value by value over the probabilities of scipy.stats."""
+    series = plan_of(spec_of(body, 150, 60, 1)).series[0]
+    k = np.arange(0, 2000)
+    p, d = law.pmf(k), k - law.mean()
+    for order in (1, 2):
+        y = d**order - p @ d**order
+        assert series.skewness(order) == pytest.approx((p @ y**3) / (p @ y**2) ** 1.5, rel=1e-6)
+
+
+def test_skewness_of_a_lump_beside_a_density_is_that_of_a_sum_of_jumps():
+    """A Poisson number of normal jumps: cumulants λ E(J^k) (Daley & Vere-Jones 2003, from memory)."""
+    series = plan_of(spec_of(COMPOUND, 150, 60, 1)).series[0]
+    second, third = 5**2 + 2**2, 5**3 + 3 * 5 * 2**2
+    assert series.skewness(1) == pytest.approx(0.02 * third / (0.02 * second) ** 1.5, rel=1e-4)
 
 
 def test_a_skewness_that_the_sample_does_not_show_lifts_the_tail():

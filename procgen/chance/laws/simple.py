@@ -8,8 +8,9 @@ from typing import Any, ClassVar
 
 import numpy as np
 
-from procgen.chance.blocks import Scratch
+from procgen.chance.blocks import Scratch, blockwise
 from procgen.chance.elementary import log_of
+from procgen.chance.kernel import is_compiling
 from procgen.chance.laws.base import Law
 from procgen.chance.normal import normal_quantile
 
@@ -114,6 +115,9 @@ class Uniform(Law):
 
     name: ClassVar[str] = "uniform"
     source: ClassVar[str] = "from its definition"
+
+    def shocks(self, u, out: np.ndarray | None = None) -> np.ndarray:
+        return blockwise(self._from_uniforms, u, out, whole=is_compiling())  # then tiles are short
 
     def _from_uniforms(self, u: np.ndarray, out: np.ndarray, scratch: Scratch) -> None:
         # The bits of `_quantile` at the nearer end: u - 1/2 and 1 - u are exact.
