@@ -17,6 +17,7 @@ from procgen.chance import kernel
 from procgen.checks import extremes, farthest, missing
 from procgen.checks.blocks import BLOCK, keep_memory
 from procgen.checks.gather import Gather, Plan
+from procgen.checks.pairs import Pairs
 from procgen.checks.pools import PoolLane
 from procgen.checks.probes import SeriesPlan
 from procgen.checks.rectangles import Blocks, Values, first_values
@@ -64,7 +65,8 @@ class Lane:
         self.errors = {name: sums.lane(paths) for name, sums in self.sums.errors.items()}
         self.events = {name: sums.lane(paths) for name, sums in self.sums.events.items()}
         self.squares = {name: sums.lane(paths) for name, sums in self.sums.squares.items()}
-        self.cross = {pair: sums.lane(paths) for pair, sums in self.sums.cross.items()}
+        self.pairs = Pairs(self.sums.cross, paths)
+        self.cross = self.pairs.totals
 
     def absorb(self, values: Mapping[str, NDArray], tick: Tick) -> None:
         """Add the next steps of all series, (paths, steps)."""
@@ -85,7 +87,8 @@ class Lane:
             for relation in self.relations:
                 relation.absorb(related, self.step)
             missing.join(self.plan, self.sums.events, self.step, self.events)
-            self._pairs(count)
+            ready = {pair: stated.ready - self.step for pair, stated in self.plan.shock_pairs.items()}
+            self.pairs.absorb(self.shocks, count, ready)
             self.step += count
             at += count
             tick(count * self.paths)
@@ -141,12 +144,6 @@ class Lane:
             place = -self.step - int(row), -self.first_path - int(path)
             found = (float(gap[row, path]), *place, float(x[row, path]), float(mean[row]))
             self.sums.gaps[plan.name] = max(self.sums.gaps.get(plan.name, found), found)
-
-    def _pairs(self, steps: int) -> None:
-        for pair, sums in self.sums.cross.items():
-            a, b = (self.shocks[name] for name in pair)
-            sums.beside(a, b, steps, self.cross[pair])
-            sums.absorb(a.view, b.view, steps, self.plan.shock_pairs[pair].ready - self.step, self.cross[pair])
 
     def finish(self) -> Gather:
         """The sums, after the last step."""

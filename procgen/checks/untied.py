@@ -20,7 +20,7 @@ from procgen.checks.verdict import Check
 
 FIRST, LAST = 3, 12  # lags that are looked at together; scores are held for as long
 _COUNT = LAST - FIRST + 1
-_SIZES, _LATER, _EARLIER = KEYS = ("sizes", "later", "earlier")
+SIZES, _LATER, _EARLIER = KEYS = ("sizes", "later", "earlier")
 _SIZE_SKEW, _SIZE_EXCESS = 0.408163, (15 / 7) ** 2 - 3  # of a product of two cluster scores: (E s³)², (E s⁴)² − 3
 _SUM_EXCESS = 40.2  # of n products with sums of ten: 3·2(100 + 2·285)/100, where the sums overlap
 
@@ -58,7 +58,7 @@ def untied_checks(pair: str, sums: UntiedSums) -> Iterator[Check]:
     """Beside the correlations at each lag: sizes, and longer lags both ways."""
     for key in sums.keys:
         n, total = sums.sums[key].tolist()  # type: ignore[index]
-        if n and key == _SIZES:
+        if n and key == SIZES:
             yield Check.of(pair, "shocks: correlation of sizes", "same step", "dependence", size_finding(n, total))
         elif n:
             probe = f"lags {'+' if key == _LATER else '−'}{FIRST} to {LAST}"

@@ -22,6 +22,7 @@ TILE = 1 << 18
 CACHED = 1 << 16  # values of a tile that stays in the processor's cache; each tile costs 0.1 ms in the interpreter
 BUSY_ROWS = 2_000_000  # below this many rows a second worker does not repay
 PAST = 1 << 22  # values before step 0 that are drawn at once, for each term that has them
+MANY = 4  # parts for each worker from which on it does not matter that the last one is smaller
 NARROW = 128  # paths below which row-wise recursions are mostly overhead
 
 
@@ -72,18 +73,24 @@ Chain = tuple[Block, ...]
 
 
 def chains(whole: Block, row_bytes: int, workers: int = 1, widest: int | None = None) -> tuple[Chain, ...]:
-    """The parts of `whole`, chain by chain: 50–130 MB each, fewer rows when several workers share them.
+    """The parts of `whole`, chain by chain: 35–130 MB each, fewer rows when several workers share them.
 
-    No part has more than `widest` paths, a multiple of CELL, where that is given.
+    No part has more than `widest` paths, a multiple of CELL, where that is given. Where there are many parts of less
+    than a cell, each is a half of a half … of a cell: sums go by halves.
     """
     width, steps = _part_shape(whole, row_bytes)
     width = width if widest is None else min(width, widest)
-    count = _count(whole, width, CELL if width % CELL == 0 else LANES)
-    if workers > 1 and whole.rows > BUSY_ROWS:
-        count = max(count, workers)
-        if count < 4 * workers:
-            count = -(-count // workers) * workers
-    ranges = _spread(whole.first_path, whole.paths, count, _grain(whole.paths, count))
+    halves = 1 << (width.bit_length() - 1)
+    if NARROW <= width < CELL and steps == whole.steps and whole.paths >= MANY * workers * halves:
+        count, grain = _count(whole, halves, halves), halves
+    else:
+        count = _count(whole, width, CELL if width % CELL == 0 else LANES)
+        if workers > 1 and whole.rows > BUSY_ROWS:
+            count = max(count, workers)
+            if count < MANY * workers:
+                count = -(-count // workers) * workers
+        grain = _grain(whole.paths, count)
+    ranges = _spread(whole.first_path, whole.paths, count, grain)
     return tuple(tuple(_steps(whole, first, paths, steps)) for first, paths in ranges)
 
 
