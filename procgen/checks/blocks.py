@@ -126,15 +126,17 @@ def _block_sums(factors: Sequence[NDArray]) -> NDArray:
     """(blocks, paths): sums over the steps of each block, (blocks, steps, paths), one step after another.
 
     The library adds whole rows in turn, whatever their width. Less than a lane group is the same few paths however
-    the ensemble is cut; its columns are long and go one by one, with room between their values: what lies side by
-    side the library adds in another order.
+    the ensemble is cut; its columns are long and go one by one.
     """
     paths = factors[0].shape[2]
     both = len(factors) > 1
     if paths >= GROUP - 1:  # or the pairs of neighbours in one
         return np.einsum("btp,btp->bp" if both else "btp->bp", *factors)
-    if paths == 1:
-        factors = [np.repeat(x, 2, axis=2)[:, :, :1] for x in factors]
+    if paths == 1:  # what lies side by side the library adds in another order
+        one, two = factors[0][:, :, 0], factors[-1][:, :, 0]
+        apart = scratch(one.size, 2, 9)[:, 0].reshape(one.shape)
+        np.copyto(apart, one) if not both else np.multiply(one, two, out=apart)
+        return np.einsum("bt->b", apart)[:, None]
     columns = [np.einsum("bt,bt->b" if both else "bt->b", *(x[:, :, k] for x in factors)) for k in range(paths)]
     return np.stack(columns, axis=1)
 

@@ -25,29 +25,25 @@ def summed(g, clusters, paths, steps, lags, cluster_lags, totals, beside, profil
     for three rows.
     """
     held, held_too, more = g.shape[0] // paths - steps, clusters.shape[0] // paths - steps, lags.shape[0] - 8
+    early = 0 if held >= 12 and held_too >= 5 else min(BLOCK, steps)  # steps of blocks where partners may be missing
     for p in range(paths):
-        for first in range(0, steps, BLOCK):
-            at, there, count = (held + first) * paths + p, (held_too + first) * paths + p, min(BLOCK, steps - first)
-            if held + first >= 12 and held_too + first >= 5:
-                _block(g, clusters, at, there, count, np.uint64(paths), totals, more, p)
-                continue
-            totals[0, p] = _along(totals[0, p], g, at, g, at, False, paths, 0, count)
-            totals[1, p] = _along(totals[1, p], g, at, g, at, True, paths, 0, count)
-            start = max(1 - held - first, 0)
-            totals[4, p] = _along(totals[4, p], clusters, there, g, at - paths, True, paths, start, count)
-            for k in range(8):
-                start, back = max(lags[k] - held - first, 0), at - lags[k] * paths
-                totals[6 + k, p] = _along(totals[6 + k, p], g, at, g, back, True, paths, start, count)
-            for k in range(4):
-                start, back = max(cluster_lags[k] - held_too - first, 0), there - cluster_lags[k] * paths
-                n = 14 + more + k
-                totals[n, p] = _along(totals[n, p], clusters, there, clusters, back, True, paths, start, count)
-        at = held * paths + p
-        for k in range(8, 8 + more):
-            start, back = max(lags[k] - held, 0), at - lags[k] * paths
-            totals[6 + k, p] = _along(totals[6 + k, p], g, at, g, back, True, paths, start, steps)
-        if p:
-            beside[p - 1] = _along(beside[p - 1], g, at, g, at - 1, True, paths, 0, steps)
+        at, there = held * paths + p, held_too * paths + p
+        for k in range(15 + more + min(p, 1)):  # one after another, where not all go side by side
+            row, q, lag, known, end = totals[k], p, 0, held, early
+            a, i, b, j = g, at, g, at
+            if k == 15 + more:
+                row, q, j, end = beside, p - 1, at - 1, steps
+            elif k >= 11 + more:
+                row, lag, known = totals[3 + k], cluster_lags[k - 11 - more], held_too
+                a, i, b, j = clusters, there, clusters, there
+            elif k >= 3:
+                row, lag, end = totals[3 + k], lags[k - 3], early if k < 11 else steps
+            elif k == 2:
+                row, lag, a, i = totals[4], 1, clusters, there
+            row[q] = _along(row[q], a, i, b, j - lag * paths, k > 0, paths, max(lag - known, 0), end)
+        for first in range(early, steps, BLOCK):
+            place, count = first * paths, min(BLOCK, steps - first)
+            _block(g, clusters, at + place, there + place, count, np.uint64(paths), totals, more, p)
         for k in range(short.shape[0]):
             short[k, p] = _halved(g, at + STRETCH * k * paths, paths)
     for t in range(steps):

@@ -39,10 +39,10 @@ def tasks(
     out = address(ensemble.path)
     shared = {"out": out, "manifest": ensemble.digest, "raw": spec.raw, "columns": dict(columns)}
     shared["same_draws"] = same_draws
-    shared["compile"] = repays(ensemble.whole.rows * len(columns) // workers)
     chains: dict[tuple[int, int], list[int]] = {}
     for number, part in enumerate(ensemble.manifest.parts):
         chains.setdefault((part.block.first_path, part.block.end_path), []).append(number)
+    shared["compile"] = repays(ensemble.whole.rows * len(columns) // min(workers, len(chains)))
     return [{"shared": shared, "parts": numbers} for numbers in chains.values()]
 
 
