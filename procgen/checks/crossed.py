@@ -28,9 +28,9 @@ def _doubles(context, address):
 def crossed(scores, heights, sizes, size_heights, pairs, sized, steps, totals, block):
     """Add products of pairs of series, at lags −2 to 2 and of sizes at one step, to totals (pairs, 6, paths).
 
-    scores, sizes: addresses of the views of two windows of each series, of so many rows as `heights` say, two of them
-    at least before the last `steps` ones. pairs (number, 3): two series and a place in totals; sized: those among them
-    whose sizes are multiplied. block: room for five strips.
+    scores, sizes: addresses of the views of two windows of each series, of so many rows as `heights` say. pairs
+    (number, 4): two series, a place in totals, and the first step that counts, before step 0 of these or after it;
+    sized: those among them whose sizes are multiplied. block: room for five strips.
     """
     paths = totals.shape[2]
     for start in range(0, steps, BLOCK):
@@ -45,7 +45,19 @@ def crossed(scores, heights, sizes, size_heights, pairs, sized, steps, totals, b
                 a_at, b_at = heights[i] - steps, heights[j] - steps
                 for p in range(5 * STRIP):
                     block[p] = 0.0
-                t = start
+                first = pairs[k, 3]
+                t = max(start, min(first, end))
+                while t < min(end, first + 2):  # before the first step that counts there is nothing
+                    a1, a2 = a[a_at + t - 1, left:right], a[a_at + t, left:right]
+                    b1, b2 = b[b_at + t - 1, left:right], b[b_at + t, left:right]
+                    for p in range(width):
+                        block[2 * STRIP + p] += a2[p] * b2[p]
+                    if t > first:
+                        for p in range(width):
+                            block[STRIP + p] += a1[p] * b2[p]
+                        for p in range(width):
+                            block[3 * STRIP + p] += a2[p] * b1[p]
+                    t += 1
                 while t < end - 1:  # two steps at once
                     a0, a1 = a[a_at + t - 2, left:right], a[a_at + t - 1, left:right]
                     a2, a3 = a[a_at + t, left:right], a[a_at + t + 1, left:right]

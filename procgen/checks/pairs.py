@@ -42,21 +42,26 @@ class Pairs:
     def _at_once(self, lanes: Mapping[str, ShockLane], steps: int, ready: Mapping[Pair, int]) -> set[Pair]:
         """Do the usual pairs of which all scores are known, in one pass; which they are."""
         at = {name: k for k, name in enumerate(lanes)}
-        whole = {name for name, lane in lanes.items() if len(lane.view) >= steps + 2 and len(lane.sizes) >= steps}
-        pairs = [p for p in self._place if whole.issuperset(p) and ready[p] <= -2]
-        places = [(at[a], at[b], self._place[a, b]) for a, b in pairs]
+        known = {name: len(lane.view) for name, lane in lanes.items() if min(len(lane.view), len(lane.sizes)) >= steps}
+        pairs = [p for p in self._place if known.get(p[0], -1) == known.get(p[1])]
+        first = [max(ready[p], steps - known[p[0]]) for p in pairs]
+        places = [(at[p[0]], at[p[1]], self._place[p], f) for p, f in zip(pairs, first, strict=True)]
         sized = [place for pair, place in zip(pairs, places, strict=True) if isinstance(self.sums[pair], UntiedSums)]
         windows = [np.ascontiguousarray(lane.view) for lane in lanes.values()]
         sizes = [np.ascontiguousarray(lane.sizes) for lane in lanes.values()]
-        both = [np.array(each, dtype=np.int64).reshape(-1, 3) for each in (places, sized)]
+        both = [np.array(each, dtype=np.int64).reshape(-1, 4) for each in (places, sized)]
         totals = self._stack.copy()
         given = *_addresses(windows), *_addresses(sizes), *both, steps, totals, np.empty(_STRIPS)
         machine("crossed", "crossed", __package__)(*given)
-        done = {pair for pair in pairs if np.isfinite(totals[self._place[pair]]).all()}
-        for pair in done:
-            self._stack[self._place[pair]] = totals[self._place[pair]]
-            for counted in self.sums[pair].sums.values():
-                counted[0] += steps * self.paths
+        done = set()
+        for pair, f in zip(pairs, first, strict=True):
+            new = totals[self._place[pair]]
+            if np.isfinite(new).all():
+                self._stack[self._place[pair]] = new
+                done.add(pair)
+                for key, counted in self.sums[pair].sums.items():
+                    missing = 0 if key == SIZES else min(max(f + abs(key), 0), steps)
+                    counted[0] += (steps - missing) * self.paths
         return done
 
 
