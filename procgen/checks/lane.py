@@ -42,8 +42,8 @@ def repays(values: int) -> bool:
 
 def are_kept() -> bool:
     """Whether the pass that nearly all data need is kept as machine code here."""
-    tile, row, counts = np.empty((0, 0)), np.empty(0), np.empty(0, dtype=np.int64)
-    return kernel.machine("fused", "scored", __package__).is_kept(tile, row, 1.0, counts, tile, counts, row)
+    tile, bits, places = np.empty((0, 0)), np.empty(0, dtype=np.uint64), np.empty(0, dtype=np.int64)
+    return kernel.machine("fused", "looked", __package__).is_kept(tile, bits, bits, places, places, places)
 
 
 class Lane:

@@ -162,6 +162,7 @@ def test_a_pass_over_an_ensemble(monkeypatch):
         facts, arrays = one.total().state()
         found.append({"facts": facts, **arrays})
     same(*found)
+    assert room.are_kept()  # so that a later process need not have so many values
 
 
 def test_without_numba_it_goes_on_plain(monkeypatch):
