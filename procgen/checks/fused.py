@@ -127,7 +127,7 @@ def powers(rows, sums, pairs, levels):
             now[3, k], now[4, k], now[5, k] = x * x * x * x, 0.0, 0.0
         for joined in range(level):
             left = levels[joined]
-            end = path - 2**joined  # the last path of the left half; what is between it and the next one comes last
+            end = path - (1 << joined)  # the last path of the left half; what is between it and the next one comes last
             a, b = rows[end], rows[end + 1]
             for power in range(4):
                 for k in range(size):
@@ -151,7 +151,7 @@ def powers(rows, sums, pairs, levels):
                 both = abs(product) < np.inf
                 pairs[0, k] = left[4, k] + pairs[0, k] + (1.0 if both else 0.0)
                 pairs[1, k] = left[5, k] + pairs[1, k] + (product if both else 0.0)
-            end, begun = end - 2**level, True
+            end, begun = end - (1 << level), True
         level += 1
 
 

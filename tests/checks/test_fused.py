@@ -5,6 +5,7 @@ import pytest
 
 from procgen.chance import kernel
 from procgen.chance.laws import LAWS
+from procgen.chance.machine import Machine
 from procgen.checks import lane as room
 from procgen.checks.blocks import WIDE, add_lags, add_products
 from procgen.checks.copies import Repeats, Watch
@@ -151,7 +152,8 @@ def test_a_pass_over_an_ensemble(monkeypatch):
     spec = spec_of(body, 88, 300, 5)
     values, plan = draw(spec), plan_of(spec)
     values["x"][5, 130] = np.nan
-    found = []
+    found, by_numba = [], []
+    monkeypatch.setattr(Machine, "_numba", lambda machine: by_numba.append(machine.name) or (lambda *args: None))
     for repays in (10**9, 1):
         monkeypatch.setattr(room, "LOADING_REPAYS", repays)
         monkeypatch.setattr(room, "COMPILING_REPAYS", repays)
@@ -162,6 +164,7 @@ def test_a_pass_over_an_ensemble(monkeypatch):
         facts, arrays = one.total().state()
         found.append({"facts": facts, **arrays})
     same(*found)
+    assert not by_numba  # all is kept as machine code
     assert room.are_kept()  # so that a later process need not have so many values
 
 
