@@ -17,12 +17,12 @@ _EXPONENT = np.uint64(0x7FF << 52)
 _part = partial(compiled_function, inline="always")
 
 
-def summed(g, clusters, paths, steps, lags, cluster_lags, totals, beside, profile, short, rest):
-    """Add products along paths and across them to totals, beside; fill sums by step and by stretch of 16 steps.
+def summed(g, clusters, paths, steps, lags, cluster_lags, totals, beside, profile, squares, blocks, rest):
+    """Add products along paths and across them to totals, beside; fill sums by step and by block.
 
     g, clusters: views of windows, (held + steps, paths) in one row. totals: of g, g², two that are left alone,
-    asymmetry, another such, then by lag: first 1, 2, 3, 4, 5, 6, 8, 12, and of clusters just 1, 2, 3, 5. rest: room
-    for three rows.
+    asymmetry, another such, then by lag: first 1, 2, 3, 4, 5, 6, 8, 12, and of clusters just 1, 2, 3, 5. squares: by
+    path those of the sums over stretches of 16 steps and over blocks. rest: room for three rows, or four numbers.
     """
     held, held_too, more = g.shape[0] // paths - steps, clusters.shape[0] // paths - steps, lags.shape[0] - 8
     early = 0 if held >= 12 and held_too >= 5 else min(BLOCK, steps)  # steps of blocks where partners may be missing
@@ -44,8 +44,13 @@ def summed(g, clusters, paths, steps, lags, cluster_lags, totals, beside, profil
         for first in range(early, steps, BLOCK):
             place, count = first * paths, min(BLOCK, steps - first)
             _block(g, clusters, at + place, there + place, count, np.uint64(paths), totals, more, p)
-        for k in range(short.shape[0]):
-            short[k, p] = _halved(g, at + STRETCH * k * paths, paths)
+        for block in range(blocks.shape[0]):
+            for k in range(4):
+                rest[k] = _halved(g, at + (BLOCK * block + STRETCH * k) * paths, paths)
+            squares[0, p] += (rest[0] * rest[0] + rest[1] * rest[1]) + (rest[2] * rest[2] + rest[3] * rest[3])
+            total = (rest[0] + rest[1]) + (rest[2] + rest[3])
+            squares[1, p] += total * total
+            blocks[block, p] = total
     for t in range(steps):
         if paths == 1:
             x = g[held + t]

@@ -30,7 +30,7 @@ from procgen.checks.blocks import (
     scratch,
 )
 from procgen.checks.scores import BINS, Scores, cluster_scores
-from procgen.checks.stretches import LENGTHS, StretchLane, StretchSums
+from procgen.checks.stretches import StretchLane, StretchSums
 from procgen.checks.uniforms import CELLS_OF_SD, bin_counts, pieces, uniforms
 
 MEMORY_LAGS = (1, 2, 3, 4, 5, 6, 8, 12)
@@ -183,36 +183,42 @@ class ShockSums:
             add_lagged(lane.totals[i], lane.view, lane.view, lag, steps)
         if not self.scores.gaussian:
             in_one_pass("plain_sums", np.ascontiguousarray(z), lane.totals, scratch(1, paths, 1)[0])
-        self.memory[0] += _pairs(lane.view, self.lags, steps)
-        self.cluster[0] += _pairs(lane.sizes, CLUSTER_LAGS, steps)
-        self.asymmetry[0] += paths * min(steps, len(lane.view) - 1)
-        self._add_profile(np.full(steps, float(paths)), profile, first_step)
-        self.rows[GROUP] += steps * -(-paths // GROUP)
-        self.far = farthest.farthest(g, z, x, lane.first_path, first_step, self.far, worst.view(float), self.least)
-        if squares is None:
-            self.stretches.absorb(g, first_step, lane.stretches)
-        else:
-            self.stretches.add(g, blocks, lane.stretches)
+        self._rest(z, g, x, first_step, lane, profile, worst.view(float), None if squares is None else blocks)
 
     def _few(self, z: NDArray, g: NDArray, first_step: int, lane: ShockLane, x: NDArray) -> None:
         """The same for few paths."""
         steps, paths = g.shape
         clusters, worst = self._scored(g, g, True)
         lane.view, lane.sizes = lane.scores.push(g), lane.clusters.push(clusters)
-        sums, short = np.empty((2, steps)), np.empty((steps // LENGTHS[0], paths))
-        views, lags = (lane.view.reshape(-1), lane.sizes.reshape(-1)), (np.array(self.lags), np.array(CLUSTER_LAGS))
-        in_few("summed", *views, paths, steps, *lags, lane.totals, lane.beside, sums, short, scratch(1, 3 * paths)[0])
+        profile, blocks = np.empty((2, steps)), np.empty((steps // BLOCK, paths))
+        squares = self.stretches.takes(first_step, lane.stretches)
+        in_few(
+            "summed", lane.view.reshape(-1), lane.sizes.reshape(-1), paths, steps, np.array(self.lags),
+            np.array(CLUSTER_LAGS), lane.totals, lane.beside, profile,
+            np.empty((2, paths)) if squares is None else squares, blocks, scratch(1, 3 * paths + 4)[0],
+        )  # fmt: skip
         if not self.scores.gaussian:
             add_products(lane.totals[2], z, None)
             add_products(lane.totals[3], z, z)
-        for row, each, held in ((self.memory[0], self.lags, lane.view), (self.cluster[0], CLUSTER_LAGS, lane.sizes)):
-            row += [paths * max(min(steps, len(held) - lag), 0) for lag in each]
+        self._rest(z, g, x, first_step, lane, profile, worst, None if squares is None else blocks)
+
+    def _rest(
+        self, z: NDArray, g: NDArray, x: NDArray, first_step: int, lane: ShockLane, profile: NDArray, worst: NDArray,
+        blocks: NDArray | None,
+    ) -> None:  # fmt: skip
+        """What is left of a tile of known shocks after its compiled pass; `blocks`, where that took the stretches."""
+        steps, paths = g.shape
+        self.memory[0] += _pairs(lane.view, self.lags, steps)
+        self.cluster[0] += _pairs(lane.sizes, CLUSTER_LAGS, steps)
         self.asymmetry[0] += paths * min(steps, len(lane.view) - 1)
-        self._add_profile(np.full(steps, float(paths)), sums, first_step)
+        self._add_profile(np.full(steps, float(paths)), profile, first_step)
         if paths > 1:
-            self.rows.update({min(paths, GROUP): steps * -(-paths // GROUP)})
+            self.rows[min(paths, GROUP)] += steps * -(-paths // GROUP)
         self.far = farthest.farthest(g, z, x, lane.first_path, first_step, self.far, worst, self.least)
-        self.stretches.absorb(g, first_step, lane.stretches, short)
+        if blocks is None:
+            self.stretches.absorb(g, first_step, lane.stretches)
+        else:
+            self.stretches.add(g, blocks, lane.stretches)
 
     def _single(self, z: NDArray, g: NDArray, lane: ShockLane, offset: int) -> None:
         add_products(lane.totals[0], g, None, offset)

@@ -139,7 +139,7 @@ class Power(Elementwise):
     purpose = "its body to a whole power"
     source = "Isserlis (1918) for the moments"
     example = "power: {of: [{ar: {phi: 0.6, sd: 1}}, {constant: 2}], exponent: 2}"
-    knows = "mean and covariance of a Gaussian body"
+    knows = "mean and covariance of a Gaussian body; the law at a step of one whose law is known"
     parameters = (OF, Parameter("exponent", "n", Whole(at_least=2, at_most=6), "the power"))
 
     def of_value(self, x):
@@ -154,7 +154,7 @@ class Power(Elementwise):
         return Support(low=0.0) if self.exponent % 2 == 0 else body
 
     def moments(self, axis, body):
-        return axis.product([body] * self.exponent)
+        return axis.power(body, self.exponent)
 
     def equation(self, body):
         return f"y[t] = {body}[t]^{self.exponent}"
@@ -239,7 +239,7 @@ class Larger(Term):
     purpose = "the larger of two bodies"
     source = "Clark (1961)"
     example = "max: {of: [{ar: {phi: 0.7, sd: 1}}], and: [{white_noise: {sd: 2}}]}"
-    knows = "mean and covariance of Gaussian or known bodies"
+    knows = "mean and covariance of Gaussian or known bodies; the law at a step also of any independent ones"
     composition = True
     parameters = (OF, Parameter("and", "", Body(), "the other body; a list is a sum"))
     sign = 1.0
@@ -262,9 +262,7 @@ class Larger(Term):
         return both.within(low, INF if self.sign > 0 else min(first.high, second.high))
 
     def moments(self, axis, first, second):
-        # max(x, y) = y + (x − y)₊ and min(x, y) = y − (y − x)₊
-        gap = (first + second * -1.0) * self.sign
-        return second + axis.hinge(gap) * self.sign
+        return axis.larger(first, second, self.sign)
 
     def equation(self, first, second):
         return f"y[t] = {self.kind}({first}[t], {second}[t])"

@@ -14,7 +14,7 @@ from procgen.theory.arma import PowerSeries, spectral_radius
 from procgen.theory.bends import Bending
 from procgen.theory.chains import States, Switching
 from procgen.theory.distributed import Distributed, distributed_mean
-from procgen.theory.expression import Expression, opaque, product
+from procgen.theory.expression import Expression, opaque
 from procgen.theory.fractional import Filtered, FractionalNoise, GaussianNoise, StationaryGaussian
 from procgen.theory.known import Known
 from procgen.theory.left import LeftOpen
@@ -246,10 +246,6 @@ class Axis(Volatile, Stating, Bending):
         """c A^t L z of normals z drawn once a path from the stream `key`, given A, L and c."""
         normals = self.source(key, law, 1.0)
         return self.process(LeftOpen(self.name, (normals,), transition, loading, row, self.horizon))
-
-    def product(self, expressions: Sequence[Expression]) -> Expression:
-        """The product of series."""
-        return product(self.space, expressions)
 
     def opaque(
         self,

@@ -12,11 +12,12 @@ from typing import Any
 import numpy as np
 
 from procgen.theory import known
-from procgen.theory.expression import Expression
+from procgen.theory.expression import Expression, product
+from procgen.theory.joint import larger_law, product_law
 from procgen.theory.known import Known
 from procgen.theory.lattice import Rounded
 from procgen.theory.laws import LOST, is_gaussian, marginal
-from procgen.theory.lumps import Bounded, Folded, Mapped
+from procgen.theory.lumps import Bounded, Folded, Mapped, powered
 from procgen.theory.processes import Curved, Hinged, Process, mean_at
 from procgen.theory.sources import Space
 from procgen.theory.unknown import Unknown
@@ -56,6 +57,35 @@ class Bending:
     def lawful(self, made: Expression, x: Expression, law: Callable[[Any], Any]) -> Expression:
         """What is made of the values of x at the same step alone, with its law from that of x."""
         return replace(made, law=lambda step: law(marginal(x, step))) if x.sources else made
+
+    def larger(self, x: Expression, y: Expression, sign: float) -> Expression:
+        """max(x, y) = y + (x − y)₊, or with a negative sign min(x, y) = y − (y − x)₊."""
+        made = y + self._hinged((x + y * -1.0) * sign) * sign
+        return replace(made, law=lambda step: larger_law(x, y, sign, step)) if made.sources else made
+
+    def power(self, x: Expression, n: int) -> Expression:
+        """x to the whole power n."""
+        made = product(x.space, [x] * n)
+
+        def law(step: int) -> Any:
+            try:
+                return marginal(made, step)
+            except Unknown:
+                return powered(marginal(x, step), n)
+
+        return replace(made, law=law) if x.sources else made
+
+    def product(self, expressions: Sequence[Expression]) -> Expression:
+        """The product of series."""
+        made = product(self.space, expressions)
+
+        def law(step: int) -> Any:
+            try:
+                return marginal(made, step)
+            except Unknown:
+                return product_law(expressions, step)
+
+        return replace(made, law=law) if made.sources and made.law is None else made
 
     def bounded(self, x: Expression, low: float | None, high: float | None) -> Expression:
         """x held between bounds: min(max(x, l), h) = l + (x − l)₊ − (x − h)₊, and x − (x − h)₊ where there is no l."""

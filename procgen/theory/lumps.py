@@ -42,6 +42,14 @@ def atoms_of(law: Any) -> tuple[float, ...]:
     return getattr(law, "atoms", ())
 
 
+def on_atoms(law: Any, p: NDArray, x: NDArray) -> NDArray:
+    """Quantiles x at p that were found by halving, each on the value that has its chance where one has."""
+    for value in law.atoms:
+        upto = float(law.cdf(value))
+        x = np.where((p > upto - float(law.chance(value))) & (p <= upto), value, x)
+    return x
+
+
 class Point:
     """One value, for certain: a part of a mixture."""
 
@@ -129,11 +137,7 @@ class Lumped(MixedLaw):
 
     def ppf(self, p: Any) -> NDArray:
         p = np.asarray(p, float)
-        x = super().ppf(p)
-        for value in self.atoms:
-            upto = float(self.cdf(value))
-            x = np.where((p > upto - float(self.chance(value))) & (p <= upto), value, x)
-        return x
+        return on_atoms(self, p, super().ppf(p))
 
 
 class Bounded:
@@ -202,22 +206,28 @@ class Bounded:
 
 
 class Folded:
-    """The law of |X| for an X that has a density (Leone, Nelson & Nottingham 1961)."""
+    """The law of |X| for an X that has a density, and maybe atoms (Leone, Nelson & Nottingham 1961)."""
 
     spacing = 0.0
 
     def __init__(self, law: Any):
-        if getattr(law, "spacing", 0.0) or atoms_of(law):
-            raise Unknown("the size of what has values with a chance of their own has no law that is computed")
-        self.law = law
+        if getattr(law, "spacing", 0.0):
+            raise Unknown("the size of what lies on a lattice has no law that is computed")
+        self.law, self.atoms = law, tuple(sorted({abs(x) for x in atoms_of(law)}))
+
+    def chance(self, x: Any) -> NDArray:
+        x = np.asarray(x, float)
+        return np.where(x > 0.0, chance_of(self.law, -x), 0.0) + np.where(x < 0.0, 0.0, chance_of(self.law, x))
 
     def cdf(self, x: Any) -> NDArray:
-        x = np.maximum(np.asarray(x, float), 0.0)
-        return self.law.cdf(x) - self.law.cdf(-x)
+        x = np.asarray(x, float)
+        inside = self.law.cdf(np.abs(x)) - self.law.cdf(-np.abs(x)) + chance_of(self.law, -np.abs(x))
+        return np.where(x < 0.0, 0.0, inside)
 
     def sf(self, x: Any) -> NDArray:
-        x = np.maximum(np.asarray(x, float), 0.0)
-        return self.law.sf(x) + self.law.cdf(-x)
+        x = np.asarray(x, float)
+        beyond = self.law.sf(np.abs(x)) + self.law.cdf(-np.abs(x)) - chance_of(self.law, -np.abs(x))
+        return np.where(x < 0.0, 1.0, beyond)
 
     def pdf(self, x: Any) -> NDArray:
         x = np.asarray(x, float)
@@ -234,7 +244,7 @@ class Folded:
 
         p = np.asarray(p, float)
         ends = np.abs([self.law.ppf((1.0 - p) / 2.0), self.law.isf((1.0 - p) / 2.0)])
-        return halved(lambda x: beyond(x, p), np.zeros(p.shape), ends.max(axis=0))
+        return on_atoms(self, p, halved(lambda x: beyond(x, p), np.zeros(p.shape), ends.max(axis=0)))
 
     def mean(self) -> float:
         return moments(self)[0]
@@ -252,9 +262,19 @@ class Mapped:
     spacing = 0.0
 
     def __init__(self, law: Any, f: Any, back: Any, rise: Any, ends: Sequence[float] = (-np.inf, np.inf)):
-        if getattr(law, "spacing", 0.0) or atoms_of(law):
-            raise Unknown("a curve of what has values with a chance of their own has no law that is computed")
-        self.law, self.f, self._back, self._rise, (self.low, self.high) = law, f, back, rise, ends
+        if getattr(law, "spacing", 0.0):
+            raise Unknown("a curve of what lies on a lattice has no law that is computed")
+        self.law, self.f, self._undone, self._rise, (self.low, self.high) = law, f, back, rise, ends
+        self._atoms = atoms_of(law)
+        self.atoms = tuple(float(x) for x in f(np.array(self._atoms)))
+
+    def _back(self, y: Any) -> NDArray:
+        """What y is made of; where that is an atom but for rounding, the atom."""
+        x = self._undone(y)
+        return np.where(np.isin(y, self.atoms), nearest(self._atoms, x), x) if self._atoms else x
+
+    def chance(self, x: Any) -> NDArray:
+        return self._of(x, lambda y: chance_of(self.law, self._back(y)), 0.0, 0.0)
 
     def _of(self, x: Any, what: Any, below: float, above: float) -> NDArray:
         x = np.asarray(x, float)
@@ -286,6 +306,20 @@ class Mapped:
 
     def std(self) -> float:
         return float(np.sqrt(self.var()))
+
+
+def powered(law: Any, n: int) -> Mapped:
+    """The law of X to the whole power n."""
+    even = n % 2 == 0
+
+    def back(y: NDArray) -> NDArray:
+        return np.sign(y) * np.abs(y) ** (1.0 / n)
+
+    def rise(y: NDArray) -> NDArray:
+        return np.abs(y) ** (1.0 / n - 1.0) / n
+
+    ends = (np.nextafter(0.0, -1.0), np.inf) if even else (-np.inf, np.inf)
+    return Mapped(Folded(law) if even else law, lambda x: x**n, back, rise, ends)
 
 
 def moments(law: Any) -> tuple[float, float]:

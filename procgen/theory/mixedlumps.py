@@ -18,6 +18,7 @@ from procgen.theory.lumps import Lumped, atoms_of, chance_of, nearest
 from procgen.theory.mixedlaw import MixedLaw
 from procgen.theory.unknown import Unknown
 
+UNEVEN = "what is drawn moves a jump or a bend of its distribution function"
 SAME = 1e-12  # of the size of values: atoms of two laws that are as near to each other are one
 
 
@@ -59,13 +60,28 @@ def mixed_law(
     """
     if not any(map(atoms_of, laws)):
         return MixedLaw(weights, laws)
-    law = MixedLumps(weights, laws, SAME * (sd + max(abs(value) for one in laws for value in atoms_of(one))))
-    kept = apart((value for one in others() for value in atoms_of(one)), law.room)
+    law = MixedLumps(weights, laws, _room(laws, sd))
+    _refuse_moving(law, others(), area)
+    return law
+
+
+def refuse_moving(rules: Sequence[Sequence[Any]], sd: float, area: float) -> None:
+    """Unknown where a value with a chance of its own moves from the laws at one rule's nodes to those at another's."""
+    laws, others = rules
+    if any(map(atoms_of, laws)):
+        _refuse_moving(MixedLumps([1.0 / len(laws)] * len(laws), laws, _room(laws, sd)), others, area)
+
+
+def _refuse_moving(law: MixedLumps, others: Sequence[Any], area: float) -> None:
+    kept = apart((value for one in others for value in atoms_of(one)), law.room)
     for value in law.atoms:
         fixed = bool(kept) and abs(float(nearest(kept, value)) - value) <= law.room
         if not fixed and float(law.chance(value)) > area:
             raise Unknown("a value with a chance of its own moves with a drawn parameter: its law is not computed")
-    return law
+
+
+def _room(laws: Sequence[Any], sd: float) -> float:
+    return SAME * (sd + max(abs(value) for one in laws for value in atoms_of(one)))
 
 
 def apart(values: Iterable[float], room: float) -> tuple[float, ...]:

@@ -12,7 +12,7 @@ from procgen.spec.draws import LognormalDraw, NormalDraw
 from procgen.theory.horizon import Forecast
 from procgen.theory.memory import _durbin_levinson, searched_half_life
 from procgen.theory.mixedlaw import MixedNormals, Normal
-from procgen.theory.mixedlumps import mixed_law
+from procgen.theory.mixedlumps import UNEVEN, mixed_law, refuse_moving
 from procgen.theory.series import OVERFLOW, SeriesTheory, _counted, _steps
 from procgen.theory.unknown import Unknown
 from procgen.theory.varied import Mixture, Node, sum_of
@@ -177,21 +177,24 @@ class MixedSeries(SeriesTheory):
         return self.mixture.exact and all(one.discrete or not one.random for one in nodes)
 
     def marginal(self, step: int) -> Any | None:
-        return self._try("marginal", lambda: self._marginal(int(step)))
+        return self._try("marginal", lambda: self._marginal(int(step), np.array([step])))
 
-    def _marginal(self, step: int) -> Any:
-        at = np.array([step])
+    def _marginal(self, step: int, at: NDArray) -> Any:
         if self.gaussian:
             from scipy import stats
 
             return stats.norm(float(self._mean(at)[0]), float(np.sqrt(self._covariance(at, at)[0])))
         spread = np.sqrt(np.maximum(self._covariance(at, at), 0.0))
         x = self._mean(at) + spread * np.linspace(-7.0, 7.0, 57)
-        _, nodes = self.mixture.settled(lambda nodes: [law.cdf(x) for law in self._laws(nodes, step)], AREA)
+        try:
+            _, nodes = self.mixture.settled(lambda nodes: [law.cdf(x) for law in self._laws(nodes, step)], AREA, UNEVEN)
+        except Unknown:  # a jump of the distribution function that moves is no sum of such as stand still
+            refuse_moving([self._laws(nodes, step) for nodes in self.mixture.rules], float(spread[0]), AREA)
+            raise
         laws, weights = self._laws(nodes, step), [node.weight for node in nodes]
-        if all(isinstance(law, Normal) for law in laws):
-            return MixedNormals(weights, [law.mean for law in laws], [law.sd for law in laws])
-        return mixed_law(weights, laws, lambda: self._laws(self._few, step), float(spread[0]), AREA)
+        if not all(isinstance(law, Normal) for law in laws):
+            return mixed_law(weights, laws, lambda: self._laws(self._few, step), float(spread[0]), AREA)
+        return MixedNormals(weights, [law.mean for law in laws], [law.sd for law in laws])
 
     def _laws(self, nodes: list[Node], step: int) -> list[Any]:
         gaussian = [node.theory[self.name].gaussian for node in nodes]

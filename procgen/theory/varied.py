@@ -77,12 +77,22 @@ class Mixture:
             self._nodes[points] = made
         return self._nodes[points]
 
+    @property
+    def rules(self) -> tuple[list[Node], list[Node]]:
+        """The theories at the nodes of two rules, which share only those of parameters of few values."""
+        return self.nodes(tuple([2 * points for points in self.fewest])), self.nodes()
+
     def average(self, answer: Answer) -> NDArray:
         """The average of what `answer` gives at each node; see `settled`."""
         return self.settled(answer)[0]
 
-    def settled(self, answer: Answer, room: float = 0.0) -> tuple[NDArray, list[Node]]:
-        """The average, and the nodes that it needs: half as many of any one parameter give it too, but for `room`."""
+    def settled(
+        self, answer: Answer, room: float = 0.0, why: str = "it may be infinite"
+    ) -> tuple[NDArray, list[Node]]:
+        """The average, and the nodes that it needs: half as many of any one parameter give it too, but for `room`.
+
+        why: what is said where it does not settle.
+        """
         points, known = self._points, {}
         k = 0
         while k < len(points):
@@ -101,7 +111,7 @@ class Mixture:
                 k += 1
             elif 2 * points[k] > MOST_POINTS:
                 name = [*self.parameters][k]
-                raise Unknown(f"the average over {name} does not settle with {MOST_POINTS} nodes: it may be infinite")
+                raise Unknown(f"the average over {name} does not settle with {MOST_POINTS} nodes: {why}")
             else:
                 points, k = (*points[:k], 2 * points[k], *points[k + 1 :]), 0
         self._points = points

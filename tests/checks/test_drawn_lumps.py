@@ -103,10 +103,15 @@ def test_an_atom_of_few_drawn_values_is_at_each_of_them():
 @pytest.mark.parametrize("body", [
     [{"clip": {"of": [AR], "low": -1}, "times": TIMES}],
     [demand(), {"constant": {"level": path({"uniform": [0, 30]})}}],
-], ids=["bound", "level"])  # fmt: skip
+    [demand(), {"constant": {"level": path({"uniform": [0, 0.001]})}}],
+    [{"clip": {"of": [AR], "low": path({"uniform": [-1, 0]})}}],
+    [{"max": {"of": [AR], "and": [{"constant": path({"uniform": [0, 1]})}]}}],
+], ids=["bound", "level", "level that moves little", "low", "the larger"])  # fmt: skip
 def test_of_an_atom_that_moves_with_the_drawn_number_no_law_is_given(body):
     x = pg.theory(spec(body))["x"]
-    assert x.marginal(5) is None and x.reason("marginal")
+    assert x.marginal(5) is None
+    reason = "a value with a chance of its own moves with a drawn parameter: its law is not computed"
+    assert x.reason("marginal") == reason
 
 
 @pytest.mark.parametrize("name", [*BODIES, *SHIFTED])
