@@ -48,6 +48,16 @@ def _beyond(theory: Any, node: Any, least: float, most: float, steps: int) -> fl
     return float(far) if law is None else float(law.cdf(least) + law.sf(most))
 
 
+def known_within(theory: Any, name: str, steps: int) -> float:
+    """The largest of the known numbers that a series without chance is made of: the rounding of those is in it, too."""
+    if theory[name].random:
+        return 0.0
+    at = np.array(probe_steps(steps))
+    nodes = theory.graph.order([theory.graph.series[name]])
+    found = [np.max(np.abs(theory.written[id(node)].mean(at))) for node in nodes if id(node) in theory.written]
+    return float(max(found, default=0.0))
+
+
 def may_stay(theory: Any, graph: Any, name: str, flat: frozenset[str] = frozenset()) -> bool:
     """Whether some term may hold the values of a series, and no chance is simply added to it that would part them.
 

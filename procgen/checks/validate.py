@@ -14,7 +14,7 @@ from typing import Any
 import numpy as np
 
 from procgen.checks import farthest, missing, repeated
-from procgen.checks.atoms import few_shocks, flattened, may_stay
+from procgen.checks.atoms import few_shocks, flattened, known_within, may_stay
 from procgen.checks.copies import repeats_of
 from procgen.checks.extremes import MARK, Reach
 from procgen.checks.filled import FILLED
@@ -162,6 +162,7 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
         flat = flattened(th, name, steps)
         plan.may_stay = may_stay(th[name], graph, name, flat)
         plan.smooth = smooth(graph, name, steps, flat)
+        plan.within = known_within(th, name, steps)
         series.append(plan)
         routes[name] = way
         random = th[name].random
@@ -253,7 +254,7 @@ def _known(gather: Gather, series: SeriesPlan) -> Check:
         return Check(series.name, "values", "all steps", "level", outcome="untestable", note=series.unknown)
     gap, _, _, seen, stated = gather.gaps.get(series.name, (0.0, 0, 0, math.nan, math.nan))
     scale = float(np.max(np.abs(series.mean)))
-    room = series.grain / 2 + 1e-9 * max(scale, 1e-300)
+    room = series.grain / 2 + max(1e-9 * scale, 1e-12 * series.within, 1e-309)
     given, wanted = side_by_side(seen, stated, 10)
     fault = "" if gap <= room else f"a value is {given}, stated {wanted}, without any chance in the spec"
     check = Check.fact(series.name, "values", "all steps", fault, "every value is the known one")

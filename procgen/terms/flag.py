@@ -140,7 +140,7 @@ class Flag(Term):
         return ("on",) if self.stay is None else ("on after on", "on after off")
 
     def events(self, values, cell, known, state, at):
-        return runs(values > 0.0, state, *self.chances, self.stay is not None)
+        return runs(np.where(np.isnan(values), np.nan, values > 0.0), state, *self.chances, self.stay is not None)
 
     def ahead(self, steps, state, *inputs):
         if self.spans:
@@ -178,9 +178,12 @@ def too_short(least, between):
 
 
 def runs(on, state, enter, stay, apart):
-    """Whether it is on, with its chance: if wanted apart for steps after it was on, and after it was not."""
+    """Whether it is on, with its chance: if wanted apart for steps after it was on, and after it was not.
+
+    Where `on`, 0 or 1, is NaN, neither is told of the step after.
+    """
     first = np.full((1, on.shape[1]), np.nan) if state is None else state["on"]
-    before = np.concatenate([first, np.where(on[:-1], 1.0, 0.0)])
+    before, on = np.concatenate([first, 1.0 * on[:-1]]), on == 1.0
     if not apart:
         return ((on, np.full(on.shape, enter)),)
     return (on, np.where(before == 1.0, stay, np.nan)), (on, np.where(before == 0.0, enter, np.nan))

@@ -60,6 +60,11 @@ class Whole:
         return self.counts.distribution().cdf(x - 1.0)
 
 
+def _demand(values):
+    """1 where there is demand and 0 where there is none; NaN where the value is lost."""
+    return np.where(np.isnan(values), np.nan, np.where(values > 0.0, 1.0, 0.0))
+
+
 class Intermittent(Term):
     kind = "intermittent"
     family = "counts and demand"
@@ -147,7 +152,7 @@ class Intermittent(Term):
         lost = self.law_of_size.ranks(np.max(cell[1] - cell[0]) / 2.0)
         if self.stay and not self.law_of_size.whole and lost > LOST:
             return Unknown(f"rounding makes nothing of small sizes of {self.address}: where demand came is not known")
-        on = np.where(values > 0.0, 1.0, 0.0)
+        on = _demand(values)
         enter, stay = self.flag.chances
         first = np.full((1, values.shape[1]), np.nan) if state is None else state["on"]
         before = np.concatenate([first, on[:-1]])
@@ -165,7 +170,7 @@ class Intermittent(Term):
     def events(self, values, cell, known, state, at):
         size, on, grain = self.law_of_size, values > 0.0, float(np.max(cell[1] - cell[0]))
         seen = 1.0 - float(size.ranks(grain / 2.0))  # what does not round to nothing
-        found = [(x, seen * p) for x, p in runs(on, state, *self.flag.chances, self.stay is not None)]
+        found = [(x, seen * p) for x, p in runs(_demand(values), state, *self.flag.chances, self.stay is not None)]
         for level, above in ((size.mean + 1.2 * size.sd, True), (size.mean - 0.8 * size.sd, False)):
             edge = (np.floor(level / grain) + 0.5) * grain if grain > LEAST * size.mean else level
             below = float(size.ranks(edge)) - (1.0 - seen)

@@ -17,6 +17,7 @@ PATTERN = {"seasonal_random_walk": {"period": 4, "sd": 0.3, "start": [5, -2, -4,
 WAVE = {"seasonal": {"period": 12, "harmonics": [{"amplitude": 3}]}}
 ARRIVALS = {"inar": {"alpha": 0.6, "mean": 12}}
 FLAG = {"flag": {"share": 0.2, "stay": 5}}
+DEMAND = {"intermittent": {"share": 0.2, "stay": 3, "size": 12, "sd": 6}}
 DRIFT = {"arima": {"d": 1, "theta": -0.4, "sd": 0.037}}
 
 
@@ -35,6 +36,8 @@ COMBINED = {
     "log odds of a sigmoid of a wave": within("logit", *within("sigmoid", WAVE)),
     "log odds of a flag": within("logit", FLAG, low=-1000, high=5000),
     "a sigmoid of counts": within("sigmoid", ARRIVALS),
+    "sums of demand": within("integrate", DEMAND),
+    "differences of a line": within("difference", {"trend": {"level": 310, "slope": 0.02}}, by=4, order=2),
     "sums of noise of no more steps": within("integrate", {"fractional_gaussian_noise": {"hurst": 0.7, "sd": 1}}),
 }
 
