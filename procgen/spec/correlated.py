@@ -227,7 +227,9 @@ class _Pairs:
             return ""
         own = self.links.own(target.owner, target.entry)
         if own and (target.entry is not None or not sources):
-            beside = f"name {one_of(sources)}" if sources else "put a term with plain shocks beside it and name that"
+            told = self.links.together(target.owner, own[0].partition(".")[2])
+            plain = told or "put a term with plain shocks beside it and name that"
+            beside = f"name {one_of(sources)}" if sources else plain
             return f"the shocks of {one_of(own)} are its own and cannot be mixed with others'; {beside}, {_TOGETHER}"
         if not sources:
             return f"expected a term that draws shocks, got {name}; nothing in {target.owner} draws any"

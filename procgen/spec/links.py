@@ -97,6 +97,10 @@ class Links:
         kinds = [(label, self.reader.catalogue.get(e.kind)) for label, e in found]
         return [f"{owner}.{label}" for label, kind in kinds if getattr(kind, "draws_alone", bool)()]
 
+    def together(self, owner: str, label: str) -> str:
+        """Return how two of a term move together whose draws cannot be mixed with others', where its kind says it."""
+        return getattr(self.reader.catalogue.get(self.labels[owner][label].kind), "together", "")
+
     def check(self) -> None:
         """Report every `use` of a name that does not exist, and uses that go in a circle."""
         uses = {}

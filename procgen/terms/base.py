@@ -102,6 +102,7 @@ class Term:
     separate: ClassVar[bool] = False  # whether each entry of its body is an input of its own
     outputs: ClassVar[tuple[str, ...]] = ()
     correlates: ClassVar[bool] = False  # whether its first draw may be named in `correlation`, as those of a noise may
+    together: ClassVar[str] = ""  # where its draws cannot be named in `correlation`: how two of it move together
     by_rows: ClassVar[tuple[str, ...]] = ()  # parameters that may be rows, one value a path, in `recurse`
     begins_by_rows: ClassVar[bool] = False  # whether `begin`, and what a graph asks before, take such rows too
     finer: ClassVar[str] = ""  # the parameter that says in how many parts its body cuts a step; empty where none does

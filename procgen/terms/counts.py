@@ -24,11 +24,15 @@ OF = Parameter(
 )
 
 
+TOGETHER = "let the mean of each follow a body, as in of: [{ar: {phi: 0.5, sd: 0.3}}], and name those bodies' terms"
+
+
 class Counts(Term):
     """What both laws share: subclasses give the `law`, and its central moments as polynomials in the mean."""
 
     family = "counts and demand"
     outputs = ("intensity",)
+    together = TOGETHER
     by_rows = ("mean",)
     begins_by_rows = True
 

@@ -33,6 +33,9 @@ SPACING = 0.36  # h, of modes in log λ
 FASTEST, SLOWEST = 10, -128  # modes at λ = e^{kh}: from 37 to 1e-20
 STILL = 250  # slower ones, down to where they weigh nothing beside the slowest that moves
 LONGEST_BURN = 2**15
+TOGETHER = (
+    "for a correlation of ρ at every lag add √ρ times one under shared: to √(1 − ρ) times its own in each series"
+)
 SMOOTH = 12  # beyond this lag a second difference of a power is taken by its series
 NARROW = 64  # paths, from which on a call for each step before costs less than all of them at once
 
@@ -143,6 +146,7 @@ class Arfima(Term):
     source = "Granger & Joyeux (1980); Hosking (1981)"
     example = "arfima: {d: 0.3, phi: 0.4, sd: 1}"
     knows = "autocovariance at any lag; Gaussian law; strictly stationary"
+    together = TOGETHER
     no_past = "a long memory has no past that could be drawn step by step; lag less"
     parameters: ClassVar[tuple[Parameter, ...]] = (
         Parameter("d", "d", Real(above=-0.5, below=0.5), "memory: above 0 long, below 0 a rough series without level"),
@@ -294,6 +298,7 @@ class FractionalGaussianNoise(Term):
     example = "fractional_gaussian_noise: {hurst: 0.7, sd: 1}"
     knows = "autocovariance at any lag; Gaussian law; strictly stationary"
     longest = 10_000
+    together = TOGETHER
     no_past = "it is drawn from step 0 on, each value from all before; lag less"
     parameters: ClassVar[tuple[Parameter, ...]] = (
         Parameter("hurst", "H", Real(above=0, below=1), "its exponent: above 1/2 a long memory, below it a rough one"),

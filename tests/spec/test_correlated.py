@@ -218,14 +218,17 @@ def test_too_many_names_of_one_copula():
     assert found.startswith("expected at most 100 names in a t copula, got 101")
 
 
+ROOTS = "for a correlation of ρ at every lag add √ρ times one under shared: to √(1 − ρ) times its own in each series"
+FOLLOWED = "let the mean of each follow a body, as in of: [{ar: {phi: 0.5, sd: 0.3}}], and name those bodies' terms"
 BESIDE = "put a term with plain shocks beside it and name that"
 
 
 @pytest.mark.parametrize(
     ("body", "own", "mend"),
     [
-        ("arfima: {d: 0.3, sd: 1}", "x.arfima", BESIDE),
-        ("poisson: {mean: 3}", "x.poisson", BESIDE),
+        ("arfima: {d: 0.3, sd: 1}", "x.arfima", ROOTS),
+        ("poisson: {mean: 3}", "x.poisson", FOLLOWED),
+        ("intermittent: {share: 0.2, size: 3}", "x.intermittent", BESIDE),
         ("local_level: {level_sd: 1, noise_sd: 1}", "x.local_level", BESIDE),
         ("[{inar: {alpha: 0.5, mean: 2}}, {white_noise: {sd: 1}}]", "x.inar", "name x.white_noise"),
     ],
@@ -243,3 +246,20 @@ def test_shocks_that_are_a_terms_own_cannot_be_mixed(body, own, mend):
         with pytest.raises(SpecError) as error:
             read_text(f"{spec}correlation: {{between: [y.white_noise, {name}], value: 0.3}}\n", catalogue(), ALL)
         assert str(error.value).startswith(f"{said}move together use one body under shared:\n")
+
+
+def test_what_a_refusal_tells_to_write_gives_the_correlation_that_it_tells():
+    import procgen as pg
+
+    rho, memory = 0.4, {"arfima": {"d": 0.3, "phi": 0.4, "sd": 1}}
+
+    def mixed():
+        return [{"use": "w", "times": rho**0.5}, {**memory, "times": (1.0 - rho) ** 0.5}]
+
+    said = pg.theory({
+        "procgen": 1, "seed": 1, "time": {"steps": 50}, "shared": {"w": [memory]}, "paths": 5,
+        "series": {"x": mixed(), "y": mixed(), "alone": [memory]},
+    })  # fmt: skip
+    lags, own = np.arange(12), said["alone"].autocovariance(np.arange(12))
+    np.testing.assert_allclose(said.cross("x", "y").covariance(lags, 0 * lags), rho * own, rtol=1e-12)
+    np.testing.assert_allclose(said["x"].autocovariance(lags), own, rtol=1e-12)
