@@ -228,7 +228,7 @@ BESIDE = "put a term with plain shocks beside it and name that"
     [
         ("arfima: {d: 0.3, sd: 1}", "x.arfima", ROOTS),
         ("poisson: {mean: 3}", "x.poisson", FOLLOWED),
-        ("intermittent: {share: 0.2, size: 3}", "x.intermittent", BESIDE),
+        ("flag: {share: 0.2}", "x.flag", BESIDE),
         ("local_level: {level_sd: 1, noise_sd: 1}", "x.local_level", BESIDE),
         ("[{inar: {alpha: 0.5, mean: 2}}, {white_noise: {sd: 1}}]", "x.inar", "name x.white_noise"),
     ],
