@@ -77,7 +77,7 @@ class Kalman:
         """
         mean = np.zeros(len(y)) if mean is None else mean
         if not self.a.any():
-            return self._without_memory(y - mean[:, None], step), state
+            return self._without_memory(y - mean[:, None] if mean.any() else y, step), state
         small = self._small and y.shape[1] % GROUP == 0
         size = BLOCK if small else _CHUNK
         y = y if small else y - mean[:, None]
@@ -101,8 +101,7 @@ class Kalman:
         self._extend(step + len(y) - 1)
         roots = np.array(self.roots[step : step + len(y)])
         roots = np.append(roots, np.full(len(y) - len(roots), self.roots[-1]))
-        y *= (1.0 / np.where(roots > 0, roots, np.nan))[:, None]
-        return y
+        return y * (1.0 / np.where(roots > 0, roots, np.nan))[:, None]
 
     def _take(self, chunk: Chunk, y: NDArray, state: NDArray, out: NDArray) -> NDArray:
         """Innovations of rows that are a whole number of chunks; the state after them."""
