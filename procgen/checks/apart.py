@@ -30,8 +30,11 @@ def spreads(squares: NDArray, n: NDArray) -> NDArray:
     """Sums of n squared normal scores as normal scores of their chi-square law."""
     from scipy.special import chdtr, chdtrc, ndtri
 
-    below, above = chdtr(n, squares), chdtrc(n, squares)
-    return np.where(below < above, ndtri(np.maximum(below, 1e-300)), -ndtri(np.maximum(above, 1e-300)))
+    low = squares < n
+    area = np.empty(len(squares))
+    area[low], area[~low] = chdtr(n[low], squares[low]), chdtrc(n[~low], squares[~low])
+    z = ndtri(np.maximum(area, 1e-300))
+    return np.where(low, z, -z)
 
 
 def ends_of(level: NDArray, spread: NDArray, memory: NDArray, n: NDArray, first_path: int) -> Ends:

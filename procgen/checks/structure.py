@@ -17,6 +17,7 @@ from procgen.checks.words import many, number
 
 _SHORT = 1024  # steps of a tile whose weights are kept
 _AT_ONCE = 1 << 14  # values of a fingerprint: what is computed on the way stays in the cache
+_PATHS, _ENOUGH = 16, 1024  # every so manieth path's, where there are so many left
 _SAMPLE = 61  # every so manieth step's bits are looked at for a detour through float32; at least 32 steps
 _SPACING = {"float32": 2.0**-24 + 4e-16}  # how far, of its size, a stored decimal number may lie from itself
 _UNSEEN = (0, 0, 0, 0)  # values that fit float32, whole ones, all, those that fit float16
@@ -91,7 +92,8 @@ class Structure:
                 _note(self.off_grid, what.name, off, first_path, first_step)
         elif what.type != "int64" and what.random and not what.discrete:
             stride = max(1, min(_SAMPLE, self.steps // 32))
-            sample = x[-first_step % stride :: stride]
+            apart = 1 if what.reach is None else max(1, min(_PATHS, what.reach.n // (self.steps * _ENOUGH)))
+            sample = x[-first_step % stride :: stride, -first_path % apart :: apart]
             self._samples.setdefault(what.name, []).append(sample[~np.isnan(sample)] if what.gaps else sample.flatten())
             if sum(part.size for part in self._samples[what.name]) >= _AT_ONCE:
                 self._look_closer(what.name)
