@@ -327,3 +327,30 @@ def test_reasons_and_refusals():
         twice.forecast_variance([1], given="all")
     with pytest.raises(ValueError, match="finite values"):
         twice.forecast([1], [np.nan])
+
+
+@pytest.mark.parametrize("over", [2, 3, 4, 6, 7])
+def test_a_rolling_mean_tells_its_shocks_though_its_roots_are_on_the_circle(over):
+    """e[t] + … + e[t−k+1] has no root inside the circle: its shocks are its innovations (Wold 1938)."""
+    mean = {"rolling_mean": {"of": [{"ar": {"phi": 0.5, "sd": 1}}], "over": over}}
+    x = series_of(mean)
+    psi = np.convolve(0.5 ** np.arange(H[-1]), np.ones(over) / over)[: H[-1]]
+    np.testing.assert_allclose(x.forecast_variance(H), np.cumsum(psi**2)[H - 1], rtol=1e-12)
+
+
+def test_a_rolling_mean_of_a_level_in_noise_is_what_regression_on_long_pasts_comes_near():
+    """Least squares on 200 and 400 values before: what is left falls to it like 1/n, for roots on the circle."""
+    k = 4
+    x = series_of({"rolling_mean": {"of": [{"local_level": {"level_sd": 1, "noise_sd": 2}}], "over": k}})
+    stated, left = x.forecast_variance([1, 6]), []
+    for n in (200, 400):
+        steps = np.arange(n + 6 + k)
+        path = np.tril(np.ones((len(steps), len(steps))), -1)  # a level that moves from step 1 on
+        rows = np.hstack([path, 2.0 * np.eye(len(steps))])
+        means = sum(rows[k - 1 - j : len(steps) - j] for j in range(k)) / k
+        joint = means @ means.T
+        past, ahead = slice(0, n), [n, n + 5]
+        weights = np.linalg.solve(joint[past, past], joint[past][:, ahead])
+        left.append(np.diag(joint[np.ix_(ahead, ahead)] - joint[ahead][:, past] @ weights))
+    assert np.all(left[0] > left[1]) and np.all(left[1] > stated)
+    np.testing.assert_allclose(2.0 * left[1] - left[0], stated, rtol=1e-3)
