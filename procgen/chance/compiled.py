@@ -22,6 +22,7 @@ _M0, _M1 = np.uint64(0xD2E7470EE14C6C93), np.uint64(0xCA5A826395121157)
 _W0, _W1 = np.uint64(0x9E3779B97F4A7C15), np.uint64(0xBB67AE8584CAA73B)
 _ROUNDS = 10
 _LOW, _HALF = np.uint64(0xFFFFFFFF), np.uint64(32)
+_WIDE = 16  # blocks of a row that are made abreast
 _UNIT = 2.0**-52
 _SQUARE = 16  # values: two lines of a cache
 
@@ -138,32 +139,67 @@ def words(k0, k1, step, path, out):
                     out[i, at] = four[lane]
 
 
-def _uniforms(block):
-    """A function that fills with uniforms by the blocks of a function."""
-
-    def uniforms(k0, k1, step, path, out):
-        """The same as uniforms ((word >> 12) + 1/2) 2**-52, into float64 out."""
-        k0, k1 = np.uint64(k0), np.uint64(k1)
-        paths = out.shape[1]
-        first, whole, cut, end = _ends(path, paths)
-        for i in range(out.shape[0]):
-            section, place = _position(step + i)
-            row, inside = np.uint64(4) * place, out[i, 4 * whole - path :]
-            for j in range(cut - whole):
-                at = whole + j
-                a, b, c, d = block(k0, k1, row + np.uint64(at & 3), np.uint64(at >> 2), section)
-                inside[4 * j] = _uniform(a)
-                inside[4 * j + 1] = _uniform(b)
-                inside[4 * j + 2] = _uniform(c)
-                inside[4 * j + 3] = _uniform(d)
-            for at in range(first, end):
-                if at < whole or at >= cut:
-                    four = _block(k0, k1, row + np.uint64(at & 3), np.uint64(at >> 2), section)
-                    for lane in range(4):
-                        if 0 <= 4 * at + lane - path < paths:
-                            out[i, 4 * at + lane - path] = _uniform(four[lane])
-
-    return uniforms
+@partial(compiled_function, inline="always")
+def _put(four, out, at, paths):
+    """Uniforms of a block into a row, those that are inside."""
+    for lane in range(4):
+        if 0 <= at + lane < paths:
+            out[at + lane] = _uniform(four[lane])
 
 
-uniforms, uniforms_abreast = _uniforms(_block), _uniforms(_block_of_halves)
+def uniforms(k0, k1, step, path, out, work):
+    """The same as uniforms ((word >> 12) + 1/2) 2**-52, into float64 out; work: float64 (4, any number)."""
+    k0, k1 = np.uint64(k0), np.uint64(k1)
+    paths = out.shape[1]
+    first, whole, cut, end = _ends(path, paths)
+    for i in range(out.shape[0]):
+        section, place = _position(step + i)
+        row, line = np.uint64(4) * place, out[i]
+        for block in range(whole, cut):
+            a, b, c, d = _block(k0, k1, row + np.uint64(block & 3), np.uint64(block >> 2), section)
+            at = 4 * block - path
+            line[at] = _uniform(a)
+            line[at + 1] = _uniform(b)
+            line[at + 2] = _uniform(c)
+            line[at + 3] = _uniform(d)
+        for block in range(first, end):
+            if block < whole or block >= cut:
+                four = _block(k0, k1, row + np.uint64(block & 3), np.uint64(block >> 2), section)
+                _put(four, line, 4 * block - path, paths)
+
+
+def uniforms_abreast(k0, k1, step, path, out, work):
+    """The same, many blocks at once: those of a row, or where these are few, one of each step."""
+    k0, k1 = np.uint64(k0), np.uint64(k1)
+    steps, paths = out.shape
+    first, whole, cut, end = _ends(path, paths)
+    wide = cut - whole >= _WIDE
+    for i in range(steps if wide else 0):
+        section, place = _position(step + i)
+        row, inside = np.uint64(4) * place, out[i, 4 * whole - path :]
+        for j in range(cut - whole):
+            at = whole + j
+            a, b, c, d = _block_of_halves(k0, k1, row + np.uint64(at & 3), np.uint64(at >> 2), section)
+            inside[4 * j] = _uniform(a)
+            inside[4 * j + 1] = _uniform(b)
+            inside[4 * j + 2] = _uniform(c)
+            inside[4 * j + 3] = _uniform(d)
+    at_hand = work.shape[1]
+    for block in range(first, end):
+        if wide and whole <= block < cut:
+            continue
+        within, group, at = np.uint64(block & 3), np.uint64(block >> 2), 4 * block - path
+        for begin in range(0, steps, at_hand):
+            size = min(at_hand, steps - begin)
+            for i in range(size):
+                section, place = _position(step + begin + i)
+                a, b, c, d = _block_of_halves(k0, k1, np.uint64(4) * place + within, group, section)
+                work[0, i], work[1, i], work[2, i], work[3, i] = _uniform(a), _uniform(b), _uniform(c), _uniform(d)
+            if whole <= block < cut:
+                for i in range(size):
+                    line = out[begin + i]
+                    line[at], line[at + 1], line[at + 2], line[at + 3] = work[0, i], work[1, i], work[2, i], work[3, i]
+            else:
+                for lane in range(max(-at, 0), min(paths - at, 4)):
+                    for i in range(size):
+                        out[begin + i, at + lane] = work[lane, i]

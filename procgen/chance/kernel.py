@@ -6,7 +6,8 @@ coefficients; so does a tuple. Only + - * / np.sqrt, comparisons, np.where, np.a
 np.maximum are allowed, no ** and no sums, so that both forms give the same bits.
 
 Plain, a row is handled by one NumPy call, which is quick for hundreds of paths and slow for a few. Compiled (numba,
-the extra `speed`), one path after another runs through the same text as scalars, without the interpreter's lock.
+the extra `speed`), one path after another runs through the same text as scalars, or from a lane group on, all at each
+step, without the interpreter's lock.
 """
 
 from __future__ import annotations
@@ -34,7 +35,8 @@ import numpy as np
 from procgen.chance.abreast import abreast, by_step, kind_of, moved, passed
 from procgen.chance.machine import Machine, multiplies_eight, write
 
-_NARROW = 256  # paths: with more, the compiled form takes all of them at each step (measured: 2-4 against 10 ns)
+_NARROW = 15  # paths: with more, the compiled form takes all of them at each step (measured: 1-4 ns against 3-14)
+_FEW = 256  # paths: with more, NumPy's rows are quicker than one path after another
 _compiling: ContextVar[bool] = ContextVar("compiling", default=False)
 
 
@@ -83,13 +85,13 @@ class Kernel:
         return _as_returned(rows)
 
     def abreast(self, *args: Any) -> Any:
-        """The same values by the compiled form for many paths; by the plain one where there is none."""
+        """The same values by the compiled form for many paths; by another one where there is none."""
         lanes, names = _lanes(args), self._text.names
         subscripted, by_step = self._text.subscripted, self._text.by_step
         kinds = tuple(kind_of(a, n in subscripted, n in by_step, lanes) for n, a in zip(names, args, strict=True))
         run = self._abreast(kinds)
         if run is None:
-            return self.plain(*args)
+            return self.compiled(*args) if lanes <= _FEW else self.plain(*args)
         rows = [np.empty(lanes) for _ in range(self._text.returns)]
         kept = [np.empty(lanes) for name in names if name in self._text.moved]
         run(lanes, *map(passed, args, kinds), *kept, *rows)
@@ -243,7 +245,7 @@ def uniforms() -> Machine:
 
 def are_kept() -> bool:
     """Whether the kernels that nearly all draws need are kept as machine code here."""
-    return uniforms().is_kept(0, 0, 0, 0, np.empty((0, 0)))
+    return uniforms().is_kept(0, 0, 0, 0, np.empty((0, 0)), np.empty((0, 0)))
 
 
 def compiled_function(function: Callable, inline: Literal["never", "always"] = "never") -> Callable:

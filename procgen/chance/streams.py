@@ -12,7 +12,7 @@ counted backwards, step -1 first, so that a longer past moves nothing.
 from __future__ import annotations
 
 from dataclasses import dataclass
-from functools import cached_property, partial
+from functools import cached_property
 from hashlib import sha256
 
 import numpy as np
@@ -25,6 +25,7 @@ LANES = 16
 _WORDS_A_BLOCK = 4  # Philox4x64 makes four words from one counter
 _ROWS_A_RUN = 4096  # 512 KiB of words at a time: bounded memory, and still in cache when they are copied
 _MOST_STEPS = 2**62 // LANES
+_AT_HAND = 64  # steps whose blocks machine code has at hand
 _ONE = np.uint64(0x3FF0000000000000)  # the bits of 1.0
 _SHIFT = np.uint64(12)
 
@@ -137,8 +138,10 @@ class _Plain:
 def _compiled(key: tuple[int, int], first_path: int, first_step: int, out: np.ndarray) -> None:
     """The same filling by `procgen.chance.compiled`."""
     made = np.ascontiguousarray(out)
-    fill = uniforms if out.dtype == np.float64 else partial(machine, "compiled", "words")
-    fill()(*key, first_step, first_path, made)
+    if out.dtype == np.float64:
+        uniforms()(*key, first_step, first_path, made, np.empty((_WORDS_A_BLOCK, _AT_HAND)))
+    else:
+        machine("compiled", "words")(*key, first_step, first_path, made)
     if made is not out:
         out[...] = made
 

@@ -12,7 +12,7 @@ from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING
 
 from procgen.checks.lifted import Lifted
-from procgen.checks.words import FARTHEST, FARTHEST_SHOCK, is_signed, of_stays, sort_of
+from procgen.checks.words import FARTHEST, FARTHEST_SHOCK, SCATTER, START, is_signed, of_stays, sort_of
 
 if TYPE_CHECKING:
     from procgen.checks.verdict import Check
@@ -76,10 +76,12 @@ def _of_series(rows: Sequence[Check], sizes: Mapping[str, float]) -> Groups:
 def _plainest_first(group: list[Check], sizes: Mapping[str, float]) -> list[Check]:
     """What is off at all steps alike is told before what is off step by step, if it is most of it.
 
-    A value that is absurd by itself is told before the shock that it is.
+    A value that is absurd by itself is told before the shock that it is, and how large the start is before its scatter.
     """
     if sort_of(group[0]) == FARTHEST:
         return sorted(group, key=lambda row: row.what != FARTHEST)
+    if group[0].what == SCATTER:
+        return sorted(group, key=lambda row: row.what != START)
     if not group[0].what.endswith((" by step", " by phase")):
         return group
     alike = [row for row in group if is_signed(row) and _gain(row, sizes) >= _LIKE * _gain(group[0], sizes)]

@@ -6,7 +6,7 @@ from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
-from procgen.checks.words import START, alike, joined
+from procgen.checks.words import SCATTER, START, alike, joined
 
 if TYPE_CHECKING:
     from procgen.checks.verdict import Check
@@ -14,6 +14,7 @@ if TYPE_CHECKING:
 SIDES = ("level", "spread", "memory", "clustering", "law", "dependence")
 _NO_CHECK = "no check of it could be made"
 _MOST = 3  # series or groups that a headline names
+_OF_START = (START, SCATTER)  # which say nothing of what comes after
 
 
 @dataclass(frozen=True)
@@ -62,7 +63,8 @@ def _of(series: str, rows: Sequence[Check], about: Mapping[str, Any]) -> Coverag
     if all(_known(row) for row in rows):
         return Coverage(series, (), {}, still=any(row.outcome != "untestable" for row in rows))
     # a start beside its end says nothing of the size of either
-    seen = {row.kind for row in rows if row.outcome in ("agrees", "departs") and not _known(row) and row.what != START}
+    told = (row for row in rows if row.outcome in ("agrees", "departs") and row.what not in _OF_START)
+    seen = {row.kind for row in told if not _known(row)}
     if any(row.what == "law" and row.outcome in ("agrees", "departs") for row in rows):
         seen |= {"level", "spread"}  # the whole law is stated, its mean and variance with it
     missing = {side: _why(side, rows) for side in _wanted(series, about) if side not in seen}

@@ -55,11 +55,15 @@ class Reach:
         Also how many of its values are outside of what n values reach, and how many are absurd. `ends` (steps,): the
         least and the largest value of each step, where they are known; of sizes below `least` none is wanted.
         """
-        mean, sd = self._at(first_step, len(x))
+        least = max(_LEAST, least, known[-1][0] if len(known) == KEPT else 0.0)
         with np.errstate(invalid="ignore", divide="ignore", over="ignore"):
+            if ends is not None and self._alike is not None:
+                centre, unit = self._alike
+                if not max(ends[1].max() - centre, centre - ends[0].min()) / unit >= min(least, self._allowed):
+                    return known, (0, 0)
             low, high = ends or (np.fmin.reduce(x, axis=1), np.fmax.reduce(x, axis=1))
+            mean, sd = self._at(first_step, len(x))
             worst = np.maximum(high - mean, mean - low) / sd
-            least = max(_LEAST, least, known[-1][0] if len(known) == KEPT else 0.0)
             rows = np.flatnonzero(worst >= min(least, self._allowed))
             if not rows.size:
                 return known, (0, 0)
@@ -79,6 +83,13 @@ class Reach:
         sd = self._at(self.size - 1, 1)[1][0]
         known = self.n > 0 and np.isfinite(sd)
         return _reach(self, [0.0, 0, 1 - self.size, math.nan, math.nan, float(sd)], self.n) if known else math.inf
+
+    @cached_property
+    def _alike(self) -> tuple[np.float64, np.float64] | None:
+        """Mean and standard deviation of every step, where they are the same at all."""
+        mean, sd = self._chunk(0)
+        same = bool((mean == mean[0]).all() and (sd == sd[0]).all())
+        return (mean[0], sd[0]) if same and self.theory.stationarity.stationary else None
 
     def _at(self, first: int, count: int) -> tuple[NDArray, NDArray]:
         chunks = [self._chunk(k) for k in range(first // self.size, (first + count - 1) // self.size + 1)]

@@ -21,7 +21,7 @@ from procgen.checks.relations import Relation
 from procgen.checks.shocks import FAR, MEMORY_LAGS, NEAR, SHOCK_ARRAYS, CrossSums, ShockSums
 from procgen.checks.special import EventSums
 from procgen.checks.squares import Squares, SquareSums
-from procgen.checks.start import comparable, differences
+from procgen.checks.start import comparable, differences, told_apart
 from procgen.checks.structure import Precision, Structure
 from procgen.checks.sums import Kept, Moments, Powers
 from procgen.checks.tied import TiedSums
@@ -66,6 +66,7 @@ class Plan:
         self.gappy = np.repeat([plan.name in self.gaps for plan in self.series], sizes)
         whole = [column for column, plan in enumerate(self.series) if plan.name not in self.gaps]
         self.starts = [column for column in whole if comparable(self.series[column], self.steps)]
+        self.scattered = [column for column in whole if told_apart(self.series[column], self.steps)]
         self.kept = [(column, i) for column, plan in enumerate(self.series) for i in sorted(plan.scores)]
 
     def seen_with(self, place: int) -> list[int]:
@@ -130,7 +131,7 @@ class Gather:
         self.crossed = Powers(sum(len(pair.places) for pair in plan.cross))
         self.pooled = [Powers(p.pool.size) if p.pool else None for p in plan.series]
         self.related = [Powers(relation.pool.size) for relation in plan.relations]
-        self.starts = Powers(len(plan.starts))
+        self.starts, self.scatter = Powers(len(plan.starts)), Powers(len(plan.scattered))
         self.kept = Kept(len(plan.kept))
         self.routes = {name: way for name, way in plan.routes.items() if isinstance(way, Route)}
         scores = {name: way.scores for name, way in self.routes.items() if way.scores is not None}
@@ -145,9 +146,13 @@ class Gather:
         self.cross = {pair: sums_of(stated, few) for pair, stated in plan.shock_pairs.items()}
 
     def finish_lane(
-        self, first_path: int, probes: NDArray, pools: Sequence[NDArray], prints: NDArray, related: Sequence[NDArray]
-    ) -> None:
-        """Take what a lane has kept by path: values at probes, averages over steps, fingerprints (paths, series)."""
+        self, first_path: int, probes: NDArray, pools: Sequence[NDArray], prints: NDArray, related: Sequence[NDArray],
+        scatter: NDArray,
+    ) -> None:  # fmt: skip
+        """Take what a lane has kept by path: values at probes, averages over steps, fingerprints (paths, series).
+
+        `scatter` (paths, series): how far mean squares are apart at the start, less how far they are later.
+        """
         plan = self.plan
         self.paths += len(probes)
         self.structure.close(first_path, prints)
@@ -156,6 +161,7 @@ class Gather:
         self.deviations.absorb(rows)
         self.products.absorb(_products(plan, rows))
         self.starts.absorb(_starts(plan, rows))
+        self.scatter.absorb(scatter)
         self.crossed.absorb(_cross_products(plan, rows))
         self.kept.absorb(probes[:, [plan.offset[column] + i for column, i in plan.kept]])
         for powers, averages in zip(self.pooled, pools, strict=True):
@@ -167,7 +173,7 @@ class Gather:
     def merge(self, other: Gather) -> None:
         """Add the sums of the paths that follow."""
         self.paths += other.paths
-        for name in ("structure", "moments", "deviations", "products", "crossed", "starts", "kept"):
+        for name in ("structure", "moments", "deviations", "products", "crossed", "starts", "scatter", "kept"):
             getattr(self, name).merge(getattr(other, name))
         for ours, theirs in zip(self.pooled, other.pooled, strict=True):
             if ours is not None and theirs is not None:
@@ -218,8 +224,8 @@ class Gather:
         return self
 
     def _powers(self) -> list[Powers]:
-        found = [self.deviations, self.products, self.crossed, self.starts, *(p for p in self.pooled if p is not None)]
-        found += self.related
+        found = [self.deviations, self.products, self.crossed, self.starts, self.scatter, *self.related]
+        found += [powers for powers in self.pooled if powers is not None]
         found += [powers for e in self.errors.values() for powers in (e.powers, e.beside)]
         return found + [powers for each in self.squares.values() for powers in each.all_powers()]
 

@@ -13,7 +13,7 @@ from procgen.checks.judge import Finding
 from procgen.checks.judge_pools import pooled_checks
 from procgen.checks.limits import limit, sample_of
 from procgen.checks.probes import CrossPlan, SeriesPlan
-from procgen.checks.start import start_checks
+from procgen.checks.start import scatter_checks, start_checks
 from procgen.checks.verdict import Check
 from procgen.checks.words import side_by_side
 from procgen.theory.lumps import atoms_of
@@ -40,6 +40,9 @@ def moment_checks(gather: Gather, column: int) -> Iterator[Check]:
     yield from pooled_checks(gather, column)
     if column in gather.plan.starts:
         yield from start_checks(plan.name, plan.steps, sample_of(gather.starts, gather.plan.starts.index(column)))
+    if column in gather.plan.scattered:
+        found = sample_of(gather.scatter, gather.plan.scattered.index(column))
+        yield from scatter_checks(plan.name, gather.plan.steps, found)
 
 
 def _constant(gather: Gather, column: int, i: int) -> Check:

@@ -22,6 +22,7 @@ from procgen.checks.pools import PoolLane
 from procgen.checks.probes import SeriesPlan
 from procgen.checks.rectangles import Blocks, Values, first_values
 from procgen.checks.relations import RelationLane
+from procgen.checks.start import Early
 from procgen.checks.tree import Tree, ranges
 from procgen.ensemble.plan import Block
 
@@ -56,6 +57,7 @@ class Lane:
         self.rest: dict[str, NDArray] = {}  # steps behind the last multiple of 64
         self.probes = np.full((paths, plan.offset[-1]), np.nan)
         self.pools = [PoolLane(p.pool, paths) if p.pool else None for p in plan.series]
+        self.early = {column: Early(plan.series[column], plan.steps, paths) for column in plan.scattered}
         self.relations = [RelationLane(relation, paths) for relation in plan.relations]
         self.prints = np.zeros((len(plan.series), paths), dtype=np.uint64)
         self.watches = self.sums.structure.watches(first_path, paths)
@@ -119,6 +121,8 @@ class Lane:
         pool = self.pools[column]
         if pool is not None:
             pool.absorb(x, self.step)
+        if column in self.early:
+            self.early[column].absorb(x, self.step)
         if plan.name in sums.squares:
             sums.squares[plan.name].absorb(x, self.step, self.squares[plan.name])
         route = sums.routes.get(plan.name)
@@ -151,7 +155,9 @@ class Lane:
         related = [relation.pool.averages() for relation in self.relations]
         self.sums.structure.watched(self.watches)
         with np.errstate(over="ignore", invalid="ignore"):  # of wide laws products overflow: they are not judged
-            self.sums.finish_lane(self.first_path, self.probes, pools, self.prints.T.copy(), related)
+            early = [each.differences() for each in self.early.values()]
+            scatter = np.array(early).reshape(len(early), self.paths).T
+            self.sums.finish_lane(self.first_path, self.probes, pools, self.prints.T.copy(), related, scatter)
         for kind in ("shocks", "errors", "events", "squares", "cross"):
             for key, sums in getattr(self.sums, kind).items():
                 sums.finish(getattr(self, kind)[key])

@@ -161,7 +161,7 @@ class Marginal:
         """The values with a chance of their own, and these chances; of very many values none."""
         spacing = getattr(self.frozen, "spacing", 0.0)
         x = np.array(atoms_of(self.frozen))
-        if spacing:
+        if 0.0 < spacing < np.inf:  # inf: that of parts differs
             first, last = (float(self.frozen.ppf(p)) for p in (_LEAST, 1.0 - _LEAST))
             x = first + spacing * np.arange(round((last - first) / spacing) + 1.0)
         if not 0 < len(x) <= _VALUES:

@@ -203,8 +203,8 @@ class ShockSums:
         self._rest(z, g, x, first_step, lane, profile, worst, None if squares is None else blocks)
 
     def _rest(
-        self, z: NDArray, g: NDArray, x: NDArray, first_step: int, lane: ShockLane, profile: NDArray, worst: NDArray,
-        blocks: NDArray | None,
+        self, z: NDArray, g: NDArray, x: NDArray, first_step: int, lane: ShockLane, profile: NDArray,
+        worst: NDArray | None, blocks: NDArray | None,
     ) -> None:  # fmt: skip
         """What is left of a tile of known shocks after its compiled pass; `blocks`, where that took the stretches."""
         steps, paths = g.shape

@@ -10,8 +10,9 @@ from functools import lru_cache
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.chance.kernel import is_compiling
 from procgen.checks import copies, extremes, grids, support
-from procgen.checks.blocks import compiled, in_one_pass
+from procgen.checks.blocks import in_few, in_one_pass
 from procgen.checks.verdict import Check
 from procgen.checks.words import many, number
 
@@ -77,7 +78,7 @@ class Structure:
         what = self.series[column]
         ends, zeros = _looked(x, first_step, prints)
         begun = max(copies.BEGUN - first_step, 0)
-        if what.repeats is not None and zeros[begun:].any():
+        if what.repeats is not None and zeros is not None and zeros[begun:].any():
             here = x == 0.0
             here[:begun] = False
             _note(self.zeros, what.name, here, first_path, first_step)
@@ -367,9 +368,13 @@ def _wider(a: Sequence[float] | None, b: Sequence[float]) -> list[float]:
 
 def _looked(
     x: NDArray, first_step: int, prints: NDArray[np.uint64]
-) -> tuple[tuple[NDArray, NDArray] | None, NDArray]:
-    """The extremes of each step, None where not all is finite, and its zeros; `prints` takes fingerprints."""
-    if compiled(x.shape[1]):
+) -> tuple[tuple[NDArray, NDArray] | None, NDArray | None]:
+    """The extremes of each step, None where not all is finite; its zeros, or None; `prints` takes fingerprints."""
+    if is_compiling() and x.shape[1] == 1:
+        values, found = np.ascontiguousarray(x)[:, 0], np.empty(2, np.int64)
+        in_few("looked", values, first_step, prints, found)
+        return None if found[1] else (values, values), (values == 0.0).astype(np.int64) if found[0] else None
+    if is_compiling():
         low, high, zeros = found = np.empty((3, len(x)), dtype=np.int64)
         in_one_pass("looked", np.ascontiguousarray(x), _weights(first_step, len(x)), prints, low, high, zeros)
         low, high = found[:2].view(float)

@@ -32,7 +32,7 @@ _OUTCOMES = {"agrees": "agree", "departs": "depart"}  # of several
 _MORE_LESS = {"level": ("higher than", "lower than"), "spread": ("larger than", "smaller than")}
 _SIGNED = ("mean", "variance", "level score", "spread score")  # how the checks end whose sign says more or less
 BALANCE = "shocks: balance of paths"
-START = "size of the start"
+START, SCATTER = "size of the start", "scatter of the start"
 _BETWEEN_PATHS = ("neighbouring paths", BALANCE)  # how the checks end
 _WHOLE = {
     "shocks: level by step": "the shocks' mean at a step is off by {} of their sd, root mean square",
@@ -42,6 +42,7 @@ _WHOLE = {
     "shocks: spread by path": "the shocks' sd differs from path to path, by about {} %, root mean square",
     BALANCE: "the paths' mean shock has {} of the variance that independent paths give it",
     START: "the first values' mean size, y²/(1 + y²) for y in sd, less that of the last ones is {}",
+    SCATTER: "the mean of l²/(1 + l²), of l the log of a path's first mean square, less that of later ones is {}",
     "shocks: shape of the law": "the shocks' density is off by {}, root mean square",
     "shocks: distribution function": "the shocks' distribution function is off by up to {}",
 }
@@ -200,6 +201,8 @@ def _says(top: Check) -> str:
         return "paths are not independent of each other"
     if top.what == START:
         return f"the series starts {'narrower' if (top.estimate or 0.0) < 0 else 'wider'} than it goes on"
+    if top.what == SCATTER:
+        return "paths start with variances that are not spread as those they go on with"
     way = "not the one"
     if is_signed(top) and top.kind in _MORE_LESS and top.estimate is not None and top.theory is not None:
         way = _MORE_LESS[top.kind][int(top.estimate < top.theory)]

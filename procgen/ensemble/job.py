@@ -162,21 +162,23 @@ def _in_memory(source: Source, whole: Block, workers: int | None, progress: Prog
     size, narrow = row_bytes(source.columns), narrow_steps((whole,), row_bytes(source.columns), source.depth)
     count = default_workers(whole.rows * len(source.columns)) if workers is None else workers
     share = whole.rows * len(source.columns) // count
-    chains: dict[int, list[Block]] = {}
-    for batch in batches(whole, size):
-        chains.setdefault(batch.first_path, []).append(batch)
+    # Threads are for compiled kernels: what the interpreter does goes one by one.
+    threads = count if repays(source, narrow, share) else 1
+    tasks: dict[int, list[Block]] = {}
+    for chain in chains(whole, size, threads):
+        for part in chain:
+            for batch in batches(part, size, chain[0].steps):
+                tasks.setdefault(batch.first_path, []).append(batch)
 
-    def draw(chain: list[Block], tick: Tick) -> list[Any]:
+    def draw(task: list[Block], tick: Tick) -> list[Any]:
         drawer = Drawer(source, tick, narrow, share)
-        for batch in chain:
+        for batch in task:
             rows = slice(batch.first_path - whole.first_path, batch.end_path - whole.first_path)
             span = slice(batch.first_step, batch.end_step)
             drawer.fill(batch, {name: data[rows, span] for name, data in values.items()})
         return []
 
-    # Threads are for compiled kernels: what the interpreter does goes one by one.
-    threads = count if repays(source, narrow, share) else 1
-    engines.in_threads(draw, [*chains.values()], threads, progress, whole.rows)
+    engines.in_threads(draw, [*tasks.values()], threads, progress, whole.rows)
     stored = {column.name: store(values.pop(column.name), column, spare=True) for column in source.columns}
     return Memory(stored, source.columns, whole, source.stamps, source)
 

@@ -26,7 +26,7 @@ from procgen.chance.portable import exp, log, lost, sin_turns
 from procgen.spec.declare import Parameter, Real, Reals
 from procgen.terms.arma import not_causal, recursion
 from procgen.terms.base import SD, TOTAL_SD, Ahead, Draw, Term, number, signed
-from procgen.terms.start import companion, decay_length, partial_autocorrelations, weigh
+from procgen.terms.start import companion, decay_length, partial_autocorrelations
 
 NORMAL = Normal()
 SPACING = 0.36  # h, of modes in log λ
@@ -54,6 +54,19 @@ def remember(a, weights, lost, modes, out):
         out[t] = x
 
 
+def remembered(a, weights, lost, modes, out):
+    """`remember`, where few paths are not compiled by one call for all modes: the same sums in the same order."""
+    if a.shape[1] >= NARROW or is_compiling():
+        remember(a, weights, lost, modes, out)
+        return
+    parts = np.empty((len(weights) + 1, a.shape[1]))
+    for t in range(len(a)):
+        parts[0] = a[t]
+        np.multiply(weights[:, None], modes, out=parts[1:])
+        out[t] = np.add.accumulate(parts, axis=0)[-1]
+        modes[:] = (modes - lost[:, None] * modes) + a[t]
+
+
 @dataclass(frozen=True)
 class Modes:
     """The modes of (1 − B)^−d: their weights, the share each loses a step, and the factor of their past (lower)."""
@@ -64,15 +77,17 @@ class Modes:
 
     def past(self, z):
         """The modes just before step 0, (modes, paths), from as many standard normals, for shocks of sd 1."""
-        return np.array(weigh(self.factor, z))
+        total = self.factor[:, :1] * z[0]
+        for weights, row in zip(self.factor[:, 1:].T, z[1:], strict=True):
+            total = total + weights[:, None] * row
+        return total
 
 
 @lru_cache(maxsize=16)
 def modes_of(d: float) -> Modes:
     """The modes for a memory parameter −0.5 < d < 0.5; the last one stands for all that are too slow to move."""
-    rate = exp(np.arange(FASTEST, SLOWEST - 1, -1) * SPACING)
-    slow = exp(np.arange(SLOWEST - 1, SLOWEST - 1 - STILL, -1) * SPACING)
-    n, rows = len(rate), _factor(np.concatenate([rate, slow]), rate)
+    rate, slow, rows = _grid()
+    n = len(rate)
     total, level, left = 0.0, np.zeros(n), _level_variance(float(slow[0]), d)
     for share, row in zip(_weights(slow, d).tolist(), rows[n:], strict=True):
         total, level = total + share, level + share * row
@@ -83,6 +98,14 @@ def modes_of(d: float) -> Modes:
     if total:
         factor[n, :n], factor[n, n] = level / total, np.sqrt(max(left, 0.0)) / abs(total)
     return Modes(np.append(_weights(rate, d), total), np.append(lost(rate), 0.0), factor)
+
+
+@lru_cache(maxsize=1)
+def _grid():
+    """The rates of the modes, those too slow to move, and the coordinates of all: whatever d is."""
+    rate = exp(np.arange(FASTEST, SLOWEST - 1, -1) * SPACING)
+    slow = exp(np.arange(SLOWEST - 1, SLOWEST - 1 - STILL, -1) * SPACING)
+    return rate, slow, _factor(np.concatenate([rate, slow]), rate)
 
 
 def _weights(rate, d):
@@ -110,9 +133,9 @@ def _factor(rates, first):
 
 def _level_variance(fastest, d):
     """The variance of all modes at λ ≤ `fastest`, tiny, as geometric sums of w w′/(λ + λ′), w ∝ λ^{1−d}."""
-    pairs = 0.5
-    for n in range(1, 400):
-        pairs = pairs + 2.0 * float(exp(-n * SPACING * (1.0 - d))) / (1.0 + float(exp(-n * SPACING)))
+    n, pairs = np.arange(1.0, 400.0), 0.5
+    for each in (2.0 * exp(-n * SPACING * (1.0 - d)) / (1.0 + exp(-n * SPACING))).tolist():
+        pairs = pairs + each
     decay = (1.0 - 2.0 * d) * SPACING
     return _scale(d) * _scale(d) * float(exp((1.0 - 2.0 * d) * log(fastest))) * pairs / float(lost(decay))
 
@@ -196,7 +219,7 @@ class Arfima(Term):
         kept = np.array(np.broadcast_to(state["modes"], (len(modes.weights), a.shape[1])))
         f, x = np.empty((q + len(a), a.shape[1])), np.empty((p + len(a), a.shape[1]))
         f[:q], x[:p] = state["f"], state["x"]
-        remember(a, modes.weights, modes.lost, kept, f[q:])
+        remembered(a, modes.weights, modes.lost, kept, f[q:])
         recursion(np.array(self.phi), np.array(self.theta), x, f)
         return x[p:], {"modes": kept, "x": x[len(x) - p :].copy(), "f": f[len(f) - q :].copy()}
 

@@ -19,13 +19,16 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
+from functools import reduce
 
 import numpy as np
 
 from procgen.theory.arma import PowerSeries
+from procgen.theory.distributed import Distributed
 from procgen.theory.expression import Expression
 from procgen.theory.filtering import error_variance
 from procgen.theory.linear import At
+from procgen.theory.recursion import recursed
 from procgen.theory.sources import PROCESS, Source
 from procgen.theory.spectrum import remembered
 from procgen.theory.system import system_of
@@ -55,16 +58,17 @@ class Forecast:
 
 def variance_given_parts(x: Expression, horizons: np.ndarray) -> np.ndarray:
     """Variance of the forecast error at horizons >= 1, all past shocks of every source given."""
-    last, own, bent = _last(horizons), _long_memory(x), _bent(x)
+    last, (x, through) = _last(horizons), _within(x)
+    own, bent = _long_memory(x), _bent(x)
     if own:
-        return np.cumsum(own(last) ** 2)[horizons - 1]
+        return np.cumsum(through(own(last)) ** 2)[horizons - 1]
     if bent:
         raise Unknown(bent)
     if _has_components(x):
         return error_variance(system_of(x.space, (x.linear,)), horizons, "parts")
     psi: dict[Source, np.ndarray] = {}
     for source, ratio in ratios(x.linear):
-        psi[source] = psi.get(source, 0.0) + _series(ratio).upto(last)
+        psi[source] = psi.get(source, 0.0) + through(_series(ratio).upto(last))
     total = np.zeros(last)
     for a, left in psi.items():
         for b, right in psi.items():
@@ -74,9 +78,12 @@ def variance_given_parts(x: Expression, horizons: np.ndarray) -> np.ndarray:
 
 def variance_given_values(x: Expression, horizons: np.ndarray) -> np.ndarray:
     """Variance of the error of the best linear forecast at horizons >= 1, all past values of the series given."""
-    last, own, bent = _last(horizons), _long_memory(x), _bent(x)
+    last, whole, (x, through) = _last(horizons), x, _within(x)
+    own, bent = _long_memory(x), _bent(x)
     if own:
-        return np.cumsum(own(last) ** 2)[horizons - 1]
+        return np.cumsum(through(own(last)) ** 2)[horizons - 1]
+    if bent:
+        x = whole
     if bent and not judge(x).covariance_stationary:
         raise Unknown(f"{bent}, and its covariances depend on the step: so does the error of a forecast")
     if bent:
@@ -86,7 +93,7 @@ def variance_given_values(x: Expression, horizons: np.ndarray) -> np.ndarray:
     if _has_components(x):
         return error_variance(system_of(x.space, (x.linear,)), horizons, "values")
     variance, ratio = wold(x.space, x.linear)
-    return variance * np.cumsum(_series(ratio).upto(last) ** 2)[horizons - 1]
+    return variance * np.cumsum(through(_series(ratio).upto(last)) ** 2)[horizons - 1]
 
 
 def variance_given_record(x: Expression, horizons: np.ndarray) -> np.ndarray:
@@ -153,6 +160,22 @@ def _refuse_impossible(past: np.ndarray, deviations: np.ndarray, values: np.ndar
                          f"got {values[at]:.10g}")  # fmt: skip
 
 
+def _within(x: Expression) -> tuple[Expression, Callable[[np.ndarray], np.ndarray]]:
+    """The body of a series that is a distributed lag of one, and what the lag makes of weights; itself otherwise.
+
+    The lag has no root inside the circle: it takes nothing from what values tell, whatever its body is.
+    """
+    c, filters = 1.0, []
+    while len(x.linear) == 1 and not x.terms:
+        ((key, factor),) = x.linear.items()
+        detail = key.base.source.detail if isinstance(key, At) and not key.delay else None
+        if not isinstance(detail, Distributed) or _has_components(detail.body):
+            break
+        x, c = detail.body, c * factor
+        filters.append(tuple(detail.phi))
+    return x, lambda psi: c * reduce(lambda weights, phi: recursed(phi, weights), filters, psi)
+
+
 def _series(ratio: Ratio) -> PowerSeries:
     return PowerSeries(ratio.numerator, tuple((-ratio.denominator[1:]).tolist()))
 
@@ -170,7 +193,7 @@ def _bent(x: Expression) -> str:
     if x.terms:
         return "what is to come depends on its parts through a product or an exponential"
     names = dict.fromkeys(s.detail.name for s in x.sources if s.kind == PROCESS and not _is_component(s))
-    return f"what is to come depends on {', '.join(names)}, in no straight line" if names else ""
+    return f"what is to come depends on {', '.join(names)}, whose forecasts are not worked out" if names else ""
 
 
 def _is_component(source: Source) -> bool:

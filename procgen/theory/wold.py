@@ -31,6 +31,7 @@ VANISHES = 1e-11  # of the sum of absolute coefficients: a polynomial is 0 there
 SETTLED = 1e-11
 MOST_POINTS = 1 << 20
 HIGHEST_DEGREE = 6_000
+DENSE = 300  # degree up to which roots of unity of all orders are looked for
 
 Units = tuple[tuple[int, int], ...]  # (order, multiplicity) of the cyclotomic polynomials in a denominator
 
@@ -160,9 +161,14 @@ def _divided(numerator: np.ndarray, order: int) -> np.ndarray:
 
 
 def _vanishing(numerators: list[np.ndarray]) -> list[int]:
-    """Orders of the roots of unity at which all numerators are 0."""
+    """Orders of the roots of unity at which all numerators are 0.
+
+    Those of an order are as many as there are smaller numbers without a divisor in common with it: a sixth of it or
+    more, for orders up to 30,000. A mean over k steps has those of the divisors of k, and the degree k − 1.
+    """
     degree = min((len(n) for n in numerators), default=1) - 1
-    return [order for order in range(1, degree + 1) if _all_vanish(numerators, order)]
+    last = (6 * degree if degree <= DENSE else degree + 1) if degree else 0
+    return [order for order in range(1, last + 1) if _all_vanish(numerators, order)]
 
 
 def _all_vanish(numerators, order: int) -> bool:

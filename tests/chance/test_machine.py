@@ -11,7 +11,7 @@ import numpy as np
 import pytest
 
 import procgen
-from procgen.chance.kernel import compiling
+from procgen.chance.kernel import compiling, machine
 from procgen.chance.machine import Machine
 from procgen.chance.normal import normal_quantile
 from procgen.chance.streams import Stream
@@ -36,8 +36,13 @@ def test_the_quantile_compiled_has_the_bits_of_the_plain_one():
         assert np.array_equal(odd, normal_quantile(np.array([0.0, 0.3, 1.0])), equal_nan=True)
 
 
-@pytest.mark.parametrize(("path", "paths", "step", "steps"), [(0, 64, -3, 9), (5, 1, 7, 20), (30, 37, -20, 21)])
-def test_uniforms_compiled_are_those_of_numpy_in_any_rectangle(path, paths, step, steps):
+RECTANGLES = [(0, 64, -3, 9), (5, 1, 7, 20), (30, 37, -20, 21), (3, 130, -70, 150), (8, 8, -70, 150), (2, 1, -9, 130)]
+
+
+@pytest.mark.parametrize(("path", "paths", "step", "steps"), RECTANGLES)
+@pytest.mark.parametrize("form", ["uniforms", "uniforms_abreast"])
+def test_uniforms_compiled_are_those_of_numpy_in_any_rectangle(path, paths, step, steps, form, monkeypatch):
+    monkeypatch.setattr("procgen.chance.streams.uniforms", lambda: machine("compiled", form))
     stream = Stream(3, "x", "noise", "innovation")
     for draw in (stream.uniforms, stream.words):
         plain = draw(path, paths, step, steps)

@@ -10,6 +10,7 @@ import procgen as pg
 from procgen.checks import extremes, tails
 from procgen.checks.extremes import KEPT, Reach, checks, merged
 from procgen.checks.structure import Structure
+from procgen.checks.validate import plan_of
 from procgen.checks.words import name_of
 from tests.studies.departures import draw, spec_of, verdict
 
@@ -53,6 +54,16 @@ def test_chance_of_one_value_against_scipy():
         assert np.exp(student.log_chance(far(size))) >= 2 * law.sf(size)  # a bound, of order d^-4
     assert student.log_chance(far(100.0)) == pytest.approx(np.log(9e-8))
     assert Reach(Student(), 4.0).log_chance(far(5.0)) == pytest.approx(np.log(9.0 / 4.0**4))  # a cell of rounding less
+
+
+@pytest.mark.parametrize("size", [3.0, 4.5, 50.0])
+def test_known_extremes_of_steps_leave_out_nothing(size):
+    reach = plan_of(spec_of(AR, 1, 256, 1)).precision[0].reach
+    x = np.clip(draw(spec_of(AR, 1, 256, 1))["x"].T, 6.5, 13.5)  # within 2.8 sd of the mean
+    x[77] = 10.0 - 1.25 * size
+    found = reach.look(x, 0, 0, [], (x.min(axis=1), x.max(axis=1)))
+    assert found == reach.look(x, 0, 0, [])
+    assert [-far[2] for far in found[0]] == [77] * (size > 4) and found[1] == (size > 4, size > 40)
 
 
 def test_true_values_are_flagged_no_more_often_than_stated():

@@ -116,15 +116,16 @@ def test_what_spreads_values_over_their_cells(paths):
 
 @needs_numba
 @pytest.mark.parametrize("wrong", [None, np.nan, np.inf, -np.inf], ids=str)
-def test_fingerprints_and_extremes(wrong):
-    x = RNG.standard_normal((70, 33)) * 10.0 ** RNG.integers(-300, 300, (70, 33))
+@pytest.mark.parametrize("paths", [1, 2, 33])
+def test_fingerprints_and_extremes(wrong, paths):
+    x = RNG.standard_normal((70, paths)) * 10.0 ** RNG.integers(-300, 300, (70, paths))
     x[3], x[4], x[5, 0] = -np.abs(x[3]), np.abs(x[4]), -0.0
     x[6, 1:4] = 0.0
     if wrong is not None:
-        x[60, 7] = wrong
+        x[60, paths // 2] = wrong
 
     def run():
-        prints = np.arange(33, dtype=np.uint64)
+        prints = np.arange(paths, dtype=np.uint64)
         ends, zeros = _looked(x, 640, prints)
         low, high = ends or (None, None)
         return {"prints": prints, "finite": ends is not None, "low": low, "high": high, "zeros": zeros}

@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 from procgen.checks import judge, masks, ordered
 from procgen.checks.judge import Finding, Sample
 from procgen.checks.squares import hidden
-from procgen.checks.start import BLOCK, differences
+from procgen.checks.start import BLOCK, differences, from_one
 from tests.studies.calibration import Case, Findings, far, of_one_number
 from tests.studies.calibration_draws import (
     Draw,
@@ -126,6 +126,16 @@ def start_of(draw: Draw, n: int) -> Findings:
     def findings(rng: Rng, count: int) -> Iterator[tuple[Finding, int]]:
         sizes = differences(draw(rng, (count * n, 2 * BLOCK)), 1.0)
         return sample_findings(sizes.reshape(count, n), None)
+
+    return findings
+
+
+def scatter_of(draw: Draw, n: int) -> Findings:
+    """How far the mean square of 12 first values is from 1, less that of four times 12 later ones, path by path."""
+
+    def findings(rng: Rng, count: int) -> Iterator[tuple[Finding, int]]:
+        apart = from_one(np.square(draw(rng, (12, 5, count, n))).mean(axis=0))
+        return sample_findings(apart[0] - apart[1:].mean(axis=0), None)
 
     return findings
 
@@ -373,4 +383,8 @@ CASES = (
     Case("order of 1,000 paths that remember", 50_000, order_of_paths(1000, 0.8), 40_000),
     Case("worst of 200 steps", 1_000_000, worst_of(200), 200),
     Case("sums of 6 squares", 10_000_000, squares(6)),
+    Case("scatter of the start, 100 of t(4)", 100_000, scatter_of(student(4), 100), 6000),
+    Case("scatter of the start, 1,000 of t(4)", 20_000, scatter_of(student(4), 1000), 60_000),
+    Case("scatter of the start, 100 of garch (0.10, 0.80)", 20_000, scatter_of(garch(0.1, 0.8), 100), 60_000),
+    Case("scatter of the start, 500 flags of share 0.02", 20_000, scatter_of(rare(0.02), 500), 30_000),
 )

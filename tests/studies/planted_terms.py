@@ -89,8 +89,17 @@ def _overlapping(values: Values, rng: np.random.Generator) -> None:
 
 def _garch_from_calm(values: Values, rng: np.random.Generator) -> None:
     """A garch whose first variance is omega / (1 − beta), as if there had been no shocks before, and no burn-in."""
+    _garch_from(0.05 / (1 - 0.85), values, rng)
+
+
+def _garch_from_mean(values: Values, rng: np.random.Generator) -> None:
+    """A garch whose first variance is the mean of all on each path, and no burn-in."""
+    _garch_from(1.0, values, rng)
+
+
+def _garch_from(variance: float, values: Values, rng: np.random.Generator) -> None:
     paths, steps = values["x"].shape
-    z, h = rng.standard_normal((paths, steps)), np.full(paths, 0.05 / (1 - 0.85))
+    z, h = rng.standard_normal((paths, steps)), np.full(paths, variance)
     for t in range(steps):
         values["x"][:, t] = np.sqrt(h) * z[:, t]
         h = 0.05 + 0.10 * values["x"][:, t] ** 2 + 0.85 * h
@@ -138,6 +147,7 @@ CASES = (
         one("stochastic_volatility", sd=1, phi=0.95, eta=0.25, rho=-0.3), kinds=("clustering",),
     ),
     Departure("garch from ω / (1 − β), no burn-in", GARCH, spoil=_garch_from_calm, kinds=("spread",)),
+    Departure("garch from its mean variance, no burn-in", GARCH, spoil=_garch_from_mean, kinds=("spread",)),
     Departure("regimes: stays of 40 and 8 drawn as 35 and 7", calm_and_storm(40, 8), calm_and_storm(35, 7),
               kinds=("memory", "clustering", "law")),
     Departure("regimes: stays of 40 and 8 drawn as 40 and 10", calm_and_storm(40, 8), calm_and_storm(40, 10),

@@ -100,6 +100,19 @@ def begun(x: np.ndarray, size: float) -> np.ndarray:
     return out
 
 
+def alike_at_first(x: np.ndarray, size: float, steps: int = 12) -> np.ndarray:
+    """Mean squares of the first steps drawn to 1, so that l² / (1 + l²) of their log l is less by `size`; sd 1."""
+    log = np.log(np.square(x[:, :steps]).mean(axis=1))
+
+    def less(share: float) -> float:
+        near = np.square((1 - share) * log)
+        return float(np.mean(log**2 / (1 + log**2) - near / (1 + near))) - size
+
+    out = x.copy()
+    out[:, :steps] *= np.exp(-0.5 * optimize.brentq(less, 0.0, 1.0) * log)[:, None]
+    return out
+
+
 def swayed(x: np.ndarray, size: float, length: int) -> np.ndarray:
     """The mean of each stretch of so many steps made larger: the variance of its sum is 1 + size times what it was."""
     whole = x.shape[1] // length * length

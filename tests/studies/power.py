@@ -28,6 +28,7 @@ from tests.studies.plants import (
     STEPS,
     Plant,
     across,
+    alike_at_first,
     anderson_darling_shift,
     apart,
     ar,
@@ -54,6 +55,7 @@ from tests.studies.plants import (
 
 LEVEL = 0.001
 WALK = [{"random_walk": {"sd": 1}}]
+GARCH = [{"garch": {"omega": 0.05, "alpha": 0.10, "beta": 0.85}}]
 SEASON = [{"seasonal": {"period": 12, "harmonics": [{"amplitude": 1, "peak": 3}]}}, {"white_noise": {"sd": 1}}]
 HEAVY = [{"constant": 0}, {"ar": {"phi": 0.6, "total_sd": 1, "law": t(9)}}, {"white_noise": {"sd": 0.5}}]
 LONE = {"branches": {"a": [{"white_noise": {"sd": 1}}], "b": [{"white_noise": {"sd": 2}, "as": "wide"}]}}
@@ -197,6 +199,8 @@ PLANTS = (
           by="paths mixed with their neighbour"),
     Plant("size of the start", "steps 0–1", ar(law=t(9)), spoilt(ar(law=t(9)), lambda x, d, _: begun(x, d)),
           by="sd of the first values"),
+    Plant("scatter of the start", "steps 0–11", GARCH, spoilt(GARCH, lambda x, d, _: alike_at_first(x, d)),
+          by="mean squares of the first values"),
     Plant("shocks: balance of paths", "sum over steps", noise(), spoilt(noise(), lambda x, d, _: evened(x, d)),
           by="paths' mean by step"),
     Plant("shocks: correlation between series", "same step", pair(), drawn(lambda d: pair(0.35 + d)), "x ~ y",

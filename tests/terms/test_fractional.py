@@ -10,7 +10,7 @@ from scipy.linalg import cholesky, toeplitz
 from procgen.chance.kernel import available, compiling
 from procgen.spec.model import SpecError
 from procgen.terms import fractional
-from procgen.terms.fractional import modes_of, predictors_of
+from procgen.terms.fractional import modes_of, predictors_of, remember, remembered
 from procgen.theory import theory
 from procgen.theory.fractional import Filtered, FractionalNoise, GaussianNoise
 
@@ -177,3 +177,18 @@ def test_few_paths_take_all_steps_before_in_one_call(steps, paths):
     fractional.predict(weights, past, z, one)
     fractional.predicted(weights, past, z, other)
     np.testing.assert_array_equal(one, other)
+
+
+@pytest.mark.parametrize("paths", [1, 3])
+def test_few_paths_take_the_same_steps_as_many(paths):
+    """One call for all modes adds in the order of the recursion; the past as rows of the factor, added up."""
+    rng = np.random.default_rng(8)
+    modes = modes_of(0.3)
+    z, a = rng.standard_normal((len(modes.weights), paths)), rng.standard_normal((50, paths))
+    past = modes.past(z)
+    by_rows = [sum((w * v for w, v in zip(row[1:], z[1:], strict=True) if w), row[0] * z[0]) for row in modes.factor]
+    assert np.array_equal(past, np.array(by_rows))
+    one, other, out, same = past.copy(), past.copy(), np.empty_like(a), np.empty_like(a)
+    remember(a, modes.weights, modes.lost, one, out)
+    remembered(a, modes.weights, modes.lost, other, same)
+    assert np.array_equal(out, same) and np.array_equal(one, other)

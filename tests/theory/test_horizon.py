@@ -327,3 +327,54 @@ def test_reasons_and_refusals():
         twice.forecast_variance([1], given="all")
     with pytest.raises(ValueError, match="finite values"):
         twice.forecast([1], [np.nan])
+
+
+@pytest.mark.parametrize("over", [2, 3, 4, 6, 7])
+def test_a_rolling_mean_tells_its_shocks_though_its_roots_are_on_the_circle(over):
+    """e[t] + … + e[t−k+1] has no root inside the circle: its shocks are its innovations (Wold 1938)."""
+    mean = {"rolling_mean": {"of": [{"ar": {"phi": 0.5, "sd": 1}}], "over": over}}
+    x = series_of(mean)
+    psi = np.convolve(0.5 ** np.arange(H[-1]), np.ones(over) / over)[: H[-1]]
+    np.testing.assert_allclose(x.forecast_variance(H), np.cumsum(psi**2)[H - 1], rtol=1e-12)
+
+
+def test_a_rolling_mean_of_a_level_in_noise_is_what_regression_on_long_pasts_comes_near():
+    """Least squares on 200 and 400 values before: what is left falls to it like 1/n, for roots on the circle."""
+    k = 4
+    x = series_of({"rolling_mean": {"of": [{"local_level": {"level_sd": 1, "noise_sd": 2}}], "over": k}})
+    stated, left = x.forecast_variance([1, 6]), []
+    for n in (200, 400):
+        steps = np.arange(n + 6 + k)
+        path = np.tril(np.ones((len(steps), len(steps))), -1)  # a level that moves from step 1 on
+        rows = np.hstack([path, 2.0 * np.eye(len(steps))])
+        means = sum(rows[k - 1 - j : len(steps) - j] for j in range(k)) / k
+        joint = means @ means.T
+        past, ahead = slice(0, n), [n, n + 5]
+        weights = np.linalg.solve(joint[past, past], joint[past][:, ahead])
+        left.append(np.diag(joint[np.ix_(ahead, ahead)] - joint[ahead][:, past] @ weights))
+    assert np.all(left[0] > left[1]) and np.all(left[1] > stated)
+    np.testing.assert_allclose(2.0 * left[1] - left[0], stated, rtol=1e-3)
+
+
+def test_a_distributed_lag_of_a_walk_is_an_arima():
+    """(1 − φB) y = x for a random walk, and for a level in noise, which is an IMA(1, 1) (Box & Jenkins 1970, ch. 4)."""
+    lagged = {"distributed_lag": {"of": [{"random_walk": {"sd": 2}}], "phi": 0.7}}
+    same = {"arima": {"phi": 0.7, "d": 1, "sd": 2}}
+    for what in ("values", "parts"):
+        ours, theirs = (series_of(one).forecast_variance(H, given=what) for one in (lagged, same))
+        np.testing.assert_allclose(ours, theirs, rtol=1e-12)
+    twice = {"distributed_lag": {"of": [{**lagged, "times": 3}], "phi": [0.2, 0.1]}}
+    whole = np.convolve([1.0, -0.2, -0.1], [1.0, -0.7])
+    same = {"arima": {"phi": (-whole[1:]).tolist(), "d": 1, "sd": 6}}
+    np.testing.assert_allclose(series_of(twice).forecast_variance(H), series_of(same).forecast_variance(H), rtol=1e-12)
+    level = {"distributed_lag": {"of": [{"local_level": {"level_sd": 1, "noise_sd": 2}}], "phi": 0.7}}
+    variance = (9.0 + np.sqrt(9.0**2 - 4.0 * 16.0)) / 2.0  # σ²(1 + θ²) = 1 + 2·4 and −σ²θ = 4
+    same = {"arima": {"phi": 0.7, "d": 1, "theta": -4.0 / variance, "sd": np.sqrt(variance).item()}}
+    np.testing.assert_allclose(series_of(level).forecast_variance(H), series_of(same).forecast_variance(H), rtol=1e-9)
+
+
+def test_a_distributed_lag_beside_another_term_says_what_is_not_worked_out():
+    lagged = {"distributed_lag": {"of": [{"random_walk": {"sd": 2}}], "phi": 0.7}}
+    x = series_of(lagged, {"white_noise": {"sd": 1}})
+    assert x.forecast_variance(H) is None
+    assert "x.distributed_lag, whose forecasts are not worked out" in x.reason("forecast_variance")
