@@ -155,6 +155,93 @@ def powers(rows, sums, pairs, levels):
         level += 1
 
 
+def scattered(rows, first, second, group, numbers, means, products, room):
+    """Number, mean and scatter of rows (paths, size), by groups of so many paths that are joined by halves.
+
+    Rows with an element that is not finite are left out. first, second: the places of which products are made. numbers
+    (depth + 1), means (depth + 1, size), products (depth + 1, pairs): the first is the result, the others are room for
+    the halves that wait for their others; room (paths of a group, size + 1).
+    """
+    waiting = 0  # bit k: level k + 1 holds 2^k groups
+    for begin in range(0, rows.shape[0], group):
+        level = 0
+        while waiting >> level & 1:
+            level += 1
+        _group(rows[begin : begin + group], first, second, numbers, means, products, level + 1, room)
+        for joined in range(level):
+            _join(first, second, numbers, means, products, joined + 1, level + 1)
+        waiting += 1
+    level, begun = 0, False
+    while waiting >> level:
+        if waiting >> level & 1 and begun:
+            _join(first, second, numbers, means, products, level + 1, 0)
+        elif waiting >> level & 1:
+            begun, numbers[0] = True, numbers[level + 1]
+            for k in range(means.shape[1]):
+                means[0, k] = means[level + 1, k]
+            for pair in range(products.shape[1]):
+                products[0, pair] = products[level + 1, pair]
+        level += 1
+
+
+@_part
+def _group(rows, first, second, numbers, means, products, at, room):
+    """Number, mean and scatter of a few rows, into place `at`."""
+    count, size, n = rows.shape[0], rows.shape[1], 0
+    for path in range(count):
+        known = True
+        for k in range(size):
+            known = known and abs(rows[path, k]) < np.inf
+        n += known
+        room[path, size] = 1.0 if known else 0.0
+        for k in range(size):
+            room[path, k] = rows[path, k] if known else 0.0
+    numbers[at] = n
+    for k in range(size):
+        means[at, k] = _halves(room, count, k, k, False) / max(n, 1)
+    for path in range(count):
+        for k in range(size):
+            room[path, k] = rows[path, k] - means[at, k] if room[path, size] else 0.0
+    for pair in range(first.shape[0]):
+        products[at, pair] = _halves(room, count, first[pair], second[pair], True)
+
+
+@_part
+def _halves(room, count, i, j, both):
+    """Sum over up to sixteen rows of a column, or of the product of two, neighbours first."""
+    total = 0.0
+    for eight in range(0, count, 8):
+        half = 0.0
+        for four in range(eight, min(eight + 8, count), 4):
+            quarter = 0.0
+            for two in range(four, min(four + 4, count), 2):
+                a = room[two, i] * room[two, j] if both else room[two, i]
+                if two + 1 < count:
+                    a += room[two + 1, i] * room[two + 1, j] if both else room[two + 1, i]
+                quarter = a if two == four else quarter + a
+            half = quarter if four == eight else half + quarter
+        total = half if eight == 0 else total + half
+    return total
+
+
+@_part
+def _join(first, second, numbers, means, products, left, right):
+    """Both sides together, into the place of the right one (Chan, Golub & LeVeque 1983)."""
+    n, m = numbers[left], numbers[right]
+    share = m / max(n + m, 1)
+    for pair in range(first.shape[0]):
+        i, j = first[pair], second[pair]
+        a = means[right, i] - means[left, i] if n else means[right, i]
+        b = means[right, j] - means[left, j] if n else means[right, j]
+        products[right, pair] = products[left, pair] + (products[right, pair] + a * b * (n * share))
+    for k in range(means.shape[1]):
+        if n:
+            means[right, k] = means[left, k] + (means[right, k] - means[left, k]) * share
+        elif not m:
+            means[right, k] = means[left, k]
+    numbers[right] = n + m
+
+
 def looked(x, weights, prints, low, high, zeros):
     """Add the fingerprints of values x to prints; fill the bits of the extremes of each step, and its zeros."""
     steps, paths = x.shape

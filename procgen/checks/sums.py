@@ -34,6 +34,9 @@ class Moments:
     def absorb(self, rows: NDArray) -> None:
         """Add vectors (paths, size); one with an element that is not finite is left out."""
         groups = len(rows) // GROUP if len(rows) % GROUP == 0 else 1
+        if compiled(len(rows)) and len(rows) // groups == GROUP:
+            self._compiled(np.ascontiguousarray(rows, float), groups)
+            return
         known = np.isfinite(rows).all(axis=1)
         rows = np.where(known[:, None], rows, 0.0).reshape(groups, -1, len(self.mean))
         known = known.reshape(groups, -1)
@@ -48,6 +51,14 @@ class Moments:
                 n, mean, products = (np.concatenate([x, np.zeros_like(x[:1])]) for x in (n, mean, products))
             n, mean, products = self._joined(n[0::2], mean[0::2], products[0::2], n[1::2], mean[1::2], products[1::2])
         self._add(n, mean, products)
+
+    @np.errstate(over="ignore", invalid="ignore")
+    def _compiled(self, rows: NDArray, groups: int) -> None:
+        places, room = groups.bit_length() + 1, np.empty((GROUP, len(self.mean) + 1))
+        n, mean = np.zeros(places, dtype=np.int64), np.zeros((places, len(self.mean)))
+        products = np.zeros((places, len(self.pairs)))
+        in_one_pass("scattered", rows, self._i, self._j, GROUP, n, mean, products, room)
+        self._add(n[:1], mean[:1], products[:1])
 
     def merge(self, other: Moments) -> None:
         self._add(np.array([other.n]), other.mean[None], other.products[None])

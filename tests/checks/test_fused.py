@@ -14,7 +14,7 @@ from procgen.checks.recover import dither
 from procgen.checks.scores import Scores
 from procgen.checks.shocks import MEMORY_LAGS, SHOCK_ARRAYS, ShockSums
 from procgen.checks.structure import _looked
-from procgen.checks.sums import Powers
+from procgen.checks.sums import Moments, Powers
 from procgen.checks.validate import plan_of
 from tests.studies.departures import draw, spec_of
 
@@ -236,5 +236,21 @@ def test_powers_over_paths_and_products_of_neighbours(paths):
         powers.absorb(rows)
         powers.absorb(rows[::-1])
         return {name: getattr(powers, name) for name in ("n", "sums", "pairs", "ends", "paths")}
+
+    same(*both(run))
+
+
+@needs_numba
+@pytest.mark.parametrize("paths", [32, 48, 112, 1024])
+def test_means_and_scatter_over_paths(paths):
+    rows = RNG.standard_normal((paths, 7)) * 10.0 ** np.array([0, 3, -3, 80, 0, 0, 0]) + 5.0
+    rows[3, 5], rows[4, 5], rows[paths - 1, 5] = np.nan, np.inf, -np.inf
+    rows[16:32] = np.nan
+
+    def run():
+        moments = Moments(7)
+        moments.absorb(rows)
+        moments.absorb(rows[::-1])
+        return {name: getattr(moments, name) for name in ("n", "mean", "products")}
 
     same(*both(run))
