@@ -18,7 +18,7 @@ from procgen.ensemble.ensemble import Ensemble, Memory, OnDisk
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.layouts import Layout
 from procgen.ensemble.manifest import Manifest, bytes_text
-from procgen.ensemble.part import WORK, Task, row_bytes
+from procgen.ensemble.part import WORK, Task, get_ready, row_bytes
 from procgen.ensemble.places import address
 from procgen.ensemble.plan import Block, Chain, batches, chains, narrow_steps
 from procgen.ensemble.present import Present
@@ -266,7 +266,7 @@ class Job:
                 tasks.append(self._task(chain, start, self.whole.rows * len(self.columns) // engine.size))
         done = sum(Block(**record["part"]).rows for record in records)
         todo = [task.json() for task in tasks]
-        engine.run(Work(todo, WORK, records.extend, progress, done, self.whole.rows))
+        engine.run(Work(todo, WORK, records.extend, progress, done, self.whole.rows, get_ready))
         if self.factory == FACTORY:
             revealed.write(self.folder, self.spec, self.whole, self.identity)
         made = self._make_manifest(records)
