@@ -39,7 +39,8 @@ class Counts(Term):
     @property
     def untold(self) -> str:  # type: ignore[override]
         if self.arity > 1:
-            return "its counts do not tell where the body of their mean stands; give the terms in it a `before` of their own"
+            where = "its counts do not tell where the body of their mean stands"
+            return f"{where}; give the terms in it a `before` of their own"
         return "its counts have nothing to do with those before"
 
     def law(self) -> Any:
