@@ -63,7 +63,8 @@ def _from_last(entry: Entry, term: Any, x: Array) -> Told | Unknown:
         if not inside or (possible.step and not possible.on(value)):
             allowed = "whole numbers from 0" if possible.step else f"numbers above {number(possible.low)}"
             return Unknown(f"its values are {allowed}, and the record has {value!r} at step {number(-back)}; mend it")
-    return replace(entry, values=Frozen({**entry.values, "before": Frozen({"x": float(x[-1])})})), ()
+    last = round(float(x[-1])) if possible.step else float(x[-1])
+    return replace(entry, values=Frozen({**entry.values, "before": Frozen({"x": last})})), ()
 
 
 def _own(term: Any) -> str:
