@@ -5,6 +5,7 @@ from __future__ import annotations
 import os
 import signal
 import sys
+import time
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from functools import wraps
@@ -15,6 +16,7 @@ import typer
 from procgen.ensemble.own import claim
 
 BAD_INPUT, INTERRUPTED, BROKEN_PIPE = 2, 130, 141
+EACH = 0.1  # seconds between two sights of the bar
 Tick = Callable[[int, int], None]
 
 
@@ -40,11 +42,13 @@ def run(app: typer.Typer) -> NoReturn:
     """Run the app and end the process with its exit code, without a traceback whatever happens.
 
     The matrices here are small: threads of a linear algebra library only wait for each other, and much so beside
-    other work. Being asked to end is taken as Ctrl-C is, so that a render stops between two parts.
+    other work. A process with one thread can be forked; pyarrow begins another for an allocator that it does not use.
+    Being asked to end is taken as Ctrl-C is, so that a render stops between two parts.
     """
     claim()
     for library in ("OPENBLAS", "OMP", "MKL"):
         os.environ.setdefault(f"{library}_NUM_THREADS", "1")
+    os.environ.setdefault("JE_ARROW_MALLOC_CONF", "background_thread:false")
     signal.signal(signal.SIGTERM, signal.default_int_handler)
     try:
         app()
@@ -77,13 +81,20 @@ def progress(doing: str) -> Iterator[Tick | None]:
     from rich.progress import BarColumn, Progress, TaskProgressColumn, TextColumn, TimeRemainingColumn
 
     columns = (TextColumn(doing), BarColumn(), TaskProgressColumn(), TextColumn("{task.fields[rate]}"))
-    with Progress(*columns, TimeRemainingColumn(), console=Console(stderr=True), transient=True) as bar:
+    terminal = Console(stderr=True)
+    # Drawn by the ticks, which come often, and not by a thread of its own: a process with threads is not forked.
+    with Progress(*columns, TimeRemainingColumn(), console=terminal, transient=True, auto_refresh=False) as bar:
         task = bar.add_task(doing, total=None, rate="")
+        bar.refresh()
+        last = time.monotonic()
 
         def tick(done: int, rows: int) -> None:
+            nonlocal last
             speed = bar.tasks[0].speed
             rate = f"{done:,} of {rows:,} rows" + (f", {speed:,.0f} a second" if speed else "")
-            bar.update(task, completed=done, total=rows, rate=rate)
+            shown = done >= rows or time.monotonic() - last > EACH
+            last = time.monotonic() if shown else last
+            bar.update(task, completed=done, total=rows, rate=rate, refresh=shown)
 
         yield tick
 

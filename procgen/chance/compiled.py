@@ -125,6 +125,26 @@ def turned(values, out, first, odd):
                         out[i, first + j] = values[j, i]
 
 
+def whole(values, out, most, stopped, at_hand):
+    """Whole numbers as int64, into out, which may be the memory of the float64 values.
+
+    stopped[0]: where it stopped, before as many values as are at hand, of which one is not whole or beyond `most`.
+    """
+    stopped[0], chunk = values.shape[0], at_hand.shape[0]
+    for first in range(0, values.shape[0], chunk):
+        given, found = values[first : first + chunk], out[first : first + chunk]
+        wrong = 0
+        for i in range(given.shape[0]):
+            at_hand[i] = given[i]
+        for i in range(given.shape[0]):
+            wrong += not (np.rint(at_hand[i]) == at_hand[i] and abs(at_hand[i]) <= most)
+        if wrong > 0:
+            stopped[0] = first
+            break
+        for i in range(given.shape[0]):
+            found[i] = np.int64(at_hand[i])
+
+
 def words(k0, k1, step, path, out):
     """The words of the steps and paths from these on, into uint64 out (steps, paths)."""
     k0, k1 = np.uint64(k0), np.uint64(k1)

@@ -10,6 +10,7 @@ from functools import partial
 
 import numpy as np
 
+from procgen.chance.compiled_elementary import _exp
 from procgen.chance.counting import LEFT
 from procgen.chance.kernel import compiled_function
 
@@ -102,8 +103,23 @@ def _poisson_terms(k, wanted, mean, chance, below):
     return count, chance, below
 
 
-def poisson(u, nothing, mean, climb, rare, near, found, most, wanted, each, chance, below, count, places, at, out):
-    """The least counts that are enough for uniforms u, from the chances of none.
+@partial(compiled_function, inline="always")
+def _means_taken(u, mean, wanted, each, chance, below, places):
+    """Uniforms and means into work arrays, with the chances of none."""
+    for j in range(u.shape[0]):
+        wanted[j] = u[j]
+    for j in range(u.shape[0]):
+        each[j] = mean[j]
+    for j in range(u.shape[0]):
+        chance[j] = _exp(-each[j])
+    for j in range(u.shape[0]):
+        below[j] = chance[j]
+    for j in range(u.shape[0]):
+        places[j] = j
+
+
+def poisson(u, mean, climb, rare, near, found, most, wanted, each, chance, below, count, places, at, out):
+    """The least counts that are enough for uniforms u, for means of at least 0.
 
     A few chances are added up for all, then for those that need more: what is added beyond the count changes none.
     From `wanted` to `at`: work arrays of one length.
@@ -111,9 +127,7 @@ def poisson(u, nothing, mean, climb, rare, near, found, most, wanted, each, chan
     abreast = wanted.shape[0]
     for first in range(0, u.shape[0], abreast):
         left = min(abreast, u.shape[0] - first)
-        _taken(u[first : first + left], nothing[first : first + left], wanted, chance, below, places)
-        for j in range(left):
-            each[j] = mean[first + j]
+        _means_taken(u[first : first + left], mean[first : first + left], wanted, each, chance, below, places)
         here = out[first : first + left]
         for k in range(0, climb, _TERMS):
             if k == 0:  # said by itself, for half of these divisions are by a power of two
@@ -129,9 +143,8 @@ def poisson(u, nothing, mean, climb, rare, near, found, most, wanted, each, chan
             if here[j] >= climb:
                 here[j] = LEFT
             if u[first + j] > rare:
-                here[j] = _rare_poisson(
-                    u[first + j], nothing[first + j], mean[first + j], climb, rare, near, found, most
-                )
+                nothing = _exp(-mean[first + j])
+                here[j] = _rare_poisson(u[first + j], nothing, mean[first + j], climb, rare, near, found, most)
 
 
 @partial(compiled_function, inline="always")

@@ -96,8 +96,10 @@ def _by_blocks(function: Callable[[Array, Array, int], Array], u: Array, mean: A
 
 def _poisson(u: Array, mean: Array, times: int) -> Array:
     def summed(u: Array, mean: Array, times: int) -> tuple[Array, Array]:
+        if is_compiling():
+            return _summed("poisson", u, *_repeated(times, mean))
         nothing, m = _repeated(times, exp(-mean), mean)
-        return _summed("poisson", u, nothing, (m,), lambda k, i: m[i] / k)
+        return _climbed(u, nothing, lambda k, i: m[i] / k)
 
     return _found(u, mean, times, summed, _poisson_by_area)
 
@@ -127,16 +129,14 @@ def _found(
     return out
 
 
-def _summed(name: str, u: Array, nothing: Array, of: tuple, ratio: Ratio) -> tuple[Array, Array]:
-    """`_climbed`, compiled as far as that goes where kernels are compiled; `of` are the numbers in the ratio."""
-    if not is_compiling():
-        return _climbed(u, nothing, ratio)
+def _summed(name: str, u: Array, *of: Any) -> tuple[Array, Array]:
+    """`_climbed` by machine code, as far as that goes; `of` are the numbers that it is of."""
     if not u.size:
         return u, np.empty(0, np.int64)
     out = np.empty(u.shape)
     work = [*(np.empty(_ABREAST) for _ in range(5)), *(np.empty(_ABREAST, np.int64) for _ in range(2))]
     limits = _CLIMB, 1.0 - _RARE, 1.0 - 10.0 * _RARE, _FOUND, _MOST_TERMS
-    machine("compiled_counts", name)(u, nothing, *of, *limits, *work, out)
+    machine("compiled_counts", name)(u, *of, *limits, *work, out)
     return out, np.flatnonzero(out == LEFT) if out.min() == LEFT else np.empty(0, np.int64)
 
 
@@ -252,9 +252,9 @@ def _negative_binomial(u: Array, mean: Array, times: int, size: float) -> Array:
     def summed(u: Array, mean: Array, times: int) -> tuple[Array, Array]:
         share = mean / (mean + size)  # of the next chance in the last one, far up
         nothing, m = _repeated(times, exp(-size * log1p(mean / size)), share)
-        return _summed(
-            "negative_binomial", u, nothing, (m, size, ratios), lambda k, i: (k - 1.0 + size) / k * m[i]
-        )
+        if is_compiling():
+            return _summed("negative_binomial", u, nothing, m, size, ratios)
+        return _climbed(u, nothing, lambda k, i: (k - 1.0 + size) / k * m[i])
 
     return _found(u, mean, times, summed, lambda u, m: _negative_binomial_by_area(u, m, size))
 

@@ -23,6 +23,7 @@ COUNTED = 32  # values of a series that are counted, the most that are kept of o
 KEPT = COUNTED + 1  # one more shows whether there are others than these
 MARK = "all of them are this value, as if it marked what is missing"
 _LEAST = 4.0  # standard deviations, below which a value is of no interest
+_JUST = 1.0 - 1e-9  # of a size, so that rounding leaves out nothing
 _FARTHEST = 1e300  # standard deviations that are told apart
 _CHUNK = 1 << 15  # steps whose theory is asked for at once, at most
 _OUTSIDE = math.log(0.05)  # of a value that is farther than all values of N should be
@@ -58,22 +59,22 @@ class Reach:
         least = max(_LEAST, least, known[-1][0] if len(known) == KEPT else 0.0)
         with np.errstate(invalid="ignore", divide="ignore", over="ignore"):
             if ends is not None and self._alike is not None:
-                centre, unit = self._alike
-                if not max(ends[1].max() - centre, centre - ends[0].min()) / unit >= min(least, self._allowed):
-                    return known, (0, 0)
-            low, high = ends or (np.fmin.reduce(x, axis=1), np.fmax.reduce(x, axis=1))
-            mean, sd = self._at(first_step, len(x))
-            worst = np.maximum(high - mean, mean - low) / sd
-            rows = np.flatnonzero(worst >= min(least, self._allowed))
+                rows = self._rows_beyond(*ends, min(least, self._allowed))
+                mean, sd = (np.full(len(rows), value) for value in self._alike)
+            else:
+                low, high = ends or (np.fmin.reduce(x, axis=1), np.fmax.reduce(x, axis=1))
+                mean, sd = self._at(first_step, len(x))
+                rows = np.flatnonzero(np.maximum(high - mean, mean - low) / sd >= min(least, self._allowed))
+                mean, sd = mean[rows], sd[rows]
             if not rows.size:
                 return known, (0, 0)
-            sizes = np.minimum(np.abs(x[rows] - mean[rows, None]) / sd[rows, None], _FARTHEST)
+            sizes = np.minimum(np.abs(x[rows] - mean[:, None]) / sd[:, None], _FARTHEST)
         sizes[~np.isfinite(x[rows])] = 0.0
         found = list(known)
         for at, path in np.argwhere(sizes >= least).tolist():
             row = int(rows[at])
             place = -first_path - path, -first_step - row
-            found.append([float(sizes[at, path]), *place, float(x[row, path]), float(mean[row]), float(sd[row])])
+            found.append([float(sizes[at, path]), *place, float(x[row, path]), float(mean[at]), float(sd[at])])
         outside, absurd = (int(np.count_nonzero(sizes > times * self._allowed)) for times in (1.0, _ABSURD))
         return merged(found), (outside, absurd)
 
@@ -83,6 +84,15 @@ class Reach:
         sd = self._at(self.size - 1, 1)[1][0]
         known = self.n > 0 and np.isfinite(sd)
         return _reach(self, [0.0, 0, 1 - self.size, math.nan, math.nan, float(sd)], self.n) if known else math.inf
+
+    def _rows_beyond(self, low: NDArray, high: NDArray, size: float) -> NDArray[np.int64]:
+        """The steps with a value so many sd from the mean that all steps share, and maybe some just short of it."""
+        assert self._alike is not None
+        mean, sd = self._alike
+        least, most = mean - _JUST * size * sd, mean + _JUST * size * sd
+        if high.max() < most and low.min() > least:
+            return np.zeros(0, np.int64)
+        return np.flatnonzero((high >= most) | (low <= least))
 
     @cached_property
     def _alike(self) -> tuple[np.float64, np.float64] | None:

@@ -13,7 +13,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from procgen.checks import missing
+from procgen.checks import missing, waves
 from procgen.checks.errors import ErrorSums
 from procgen.checks.probes import CrossPlan, SeriesPlan
 from procgen.checks.recover import Cannot, Expected, Route, dither
@@ -67,6 +67,8 @@ class Plan:
         whole = [column for column, plan in enumerate(self.series) if plan.name not in self.gaps]
         self.starts = [column for column in whole if comparable(self.series[column], self.steps)]
         self.scattered = [column for column in whole if told_apart(self.series[column], self.steps)]
+        ways = {column: self.routes.get(self.series[column].name) for column in whole}
+        self.waved = [column for column, way in ways.items() if waves.waved(self.series[column], way)]
         self.kept = [(column, i) for column, plan in enumerate(self.series) for i in sorted(plan.scores)]
 
     def seen_with(self, place: int) -> list[int]:
@@ -132,6 +134,7 @@ class Gather:
         self.pooled = [Powers(p.pool.size) if p.pool else None for p in plan.series]
         self.related = [Powers(relation.pool.size) for relation in plan.relations]
         self.starts, self.scatter = Powers(len(plan.starts)), Powers(len(plan.scattered))
+        self.waves = Powers(waves.SIZE * len(plan.waved))
         self.kept = Kept(len(plan.kept))
         self.routes = {name: way for name, way in plan.routes.items() if isinstance(way, Route)}
         scores = {name: way.scores for name, way in self.routes.items() if way.scores is not None}
@@ -162,6 +165,7 @@ class Gather:
         self.products.absorb(_products(plan, rows))
         self.starts.absorb(_starts(plan, rows))
         self.scatter.absorb(scatter)
+        self.waves.absorb(_waves(plan, rows))
         self.crossed.absorb(_cross_products(plan, rows))
         self.kept.absorb(probes[:, [plan.offset[column] + i for column, i in plan.kept]])
         for powers, averages in zip(self.pooled, pools, strict=True):
@@ -173,7 +177,7 @@ class Gather:
     def merge(self, other: Gather) -> None:
         """Add the sums of the paths that follow."""
         self.paths += other.paths
-        for name in ("structure", "moments", "deviations", "products", "crossed", "starts", "scatter", "kept"):
+        for name in ("structure", "moments", "deviations", "products", "crossed", "starts", "scatter", "waves", "kept"):
             getattr(self, name).merge(getattr(other, name))
         for ours, theirs in zip(self.pooled, other.pooled, strict=True):
             if ours is not None and theirs is not None:
@@ -224,7 +228,7 @@ class Gather:
         return self
 
     def _powers(self) -> list[Powers]:
-        found = [self.deviations, self.products, self.crossed, self.starts, self.scatter, *self.related]
+        found = [self.deviations, self.products, self.crossed, self.starts, self.scatter, self.waves, *self.related]
         found += [powers for powers in self.pooled if powers is not None]
         found += [powers for e in self.errors.values() for powers in (e.powers, e.beside)]
         return found + [powers for each in self.squares.values() for powers in each.all_powers()]
@@ -273,6 +277,13 @@ def _starts(plan: Plan, rows: NDArray) -> NDArray:
         mine = rows[:, plan.offset[column] : plan.offset[column + 1]]
         columns.append(differences(mine, float(plan.series[column].variance[0])))
     return np.array(columns).T if columns else np.zeros((len(rows), 0))
+
+
+def _waves(plan: Plan, rows: NDArray) -> NDArray:
+    """Cosines and sines of each series to be judged so, by path."""
+    mine = [(plan.series[column], plan.offset[column], plan.offset[column + 1]) for column in plan.waved]
+    columns = [waves.statistics(series, rows[:, first:end]) for series, first, end in mine]
+    return np.concatenate([np.zeros((len(rows), 0)), *columns], axis=1)
 
 
 def _cross_products(plan: Plan, rows: NDArray) -> NDArray:

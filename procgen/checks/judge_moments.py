@@ -7,7 +7,7 @@ from collections.abc import Iterator
 
 import numpy as np
 
-from procgen.checks import judge, special
+from procgen.checks import judge, special, waves
 from procgen.checks.gather import Gather
 from procgen.checks.judge import Finding
 from procgen.checks.judge_pools import pooled_checks
@@ -40,6 +40,9 @@ def moment_checks(gather: Gather, column: int) -> Iterator[Check]:
     yield from pooled_checks(gather, column)
     if column in gather.plan.starts:
         yield from start_checks(plan.name, plan.steps, sample_of(gather.starts, gather.plan.starts.index(column)))
+    if column in gather.plan.waved:
+        first = waves.SIZE * gather.plan.waved.index(column)
+        yield from waves.wave_checks(plan, [sample_of(gather.waves, first + k) for k in range(waves.SIZE)])
     if column in gather.plan.scattered:
         found = sample_of(gather.scatter, gather.plan.scattered.index(column))
         yield from scatter_checks(plan.name, gather.plan.steps, found)

@@ -38,13 +38,14 @@ def repays(values: int) -> bool:
     """Whether compiled passes repay for so many values of one process."""
     if values <= LOADING_REPAYS or not kernel.available():
         return False
-    return values > COMPILING_REPAYS or are_kept()
+    return values >= COMPILING_REPAYS or are_kept()
 
 
 def are_kept() -> bool:
-    """Whether the pass that nearly all data need is kept as machine code here."""
+    """Whether the pass that nearly all data need is kept as machine code here, be it for many paths or for one."""
     tile, bits, places = np.empty((0, 0)), np.empty(0, dtype=np.uint64), np.empty(0, dtype=np.int64)
-    return kernel.machine("fused", "looked", __package__).is_kept(tile, bits, bits, places, places, places)
+    many, one = (kernel.machine(module, "looked", __package__) for module in ("fused", "fused_few"))
+    return many.is_kept(tile, bits, bits, places, places, places) or one.is_kept(tile[0:0].ravel(), 0, bits, places)
 
 
 class Lane:

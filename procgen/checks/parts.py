@@ -114,7 +114,7 @@ class _Chain:
         self.parts = {number: ensemble.manifest.parts[number] for number in numbers}
         self.nodes: list[tuple[int, dict[str, str]]] = []  # number of a part, packed nodes by column
         self.faults: list[tuple[str, str]] = []  # where, and what
-        self._room: dict[str, NDArray] = {}
+        self._room: dict[tuple[str, str], NDArray] = {}
 
     def blocks(self) -> Iterator[tuple[int, int, Values]]:
         """Blocks of whole lane groups; where a part cannot be read it ends, with a fault."""
@@ -132,7 +132,7 @@ class _Chain:
         if part.paths == 1:
             return blocks
         # Parts that follow each other must be cut at the same paths, hence each is handed on whole.
-        return grouped(blocks, part) if len(self.parts) == 1 else [_whole(blocks, part)]
+        return grouped(blocks, part) if len(self.parts) == 1 else [self._whole(blocks, part)]
 
     def _pieces(self, number: int, part: Block, pieces: Iterator[Any]) -> Iterator[tuple[int, int, Values]]:
         leaves = {name: digest.Leaves(part) for name in self.ensemble.names}
@@ -151,21 +151,27 @@ class _Chain:
         """Stored values as float64, in the same memory for each piece: among what else is asked for it would grow."""
         if values.dtype == np.float64:
             return values
-        if name not in self._room or self._room[name].size < values.size:
-            self._room[name] = np.empty(values.size)
-        numbers = self._room[name][: values.size].reshape(values.shape)
+        numbers = self._kept("piece", name, values.shape)
         numbers[...] = values
         return numbers
 
+    def _whole(self, blocks: Blocks, part: Block) -> tuple[int, int, Values]:
+        """A part in one piece, in the memory of the one before, which has been taken in."""
+        out: dict[str, NDArray] = {}
+        for first_path, first_step, values in blocks:
+            for name, numbers in values.items():
+                path, step = first_path - part.first_path, first_step - part.first_step
+                rows = out[name] if name in out else self._kept("part", name, (part.paths, part.steps))
+                rows[path : path + len(numbers), step : step + numbers.shape[1]] = numbers
+                out[name] = rows
+        return part.first_path, part.first_step, out
 
-def _whole(blocks: Blocks, part: Block) -> tuple[int, int, Values]:
-    out: dict[str, NDArray] = {}
-    for first_path, first_step, values in blocks:
-        for name, numbers in values.items():
-            path, step = first_path - part.first_path, first_step - part.first_step
-            rows = out.setdefault(name, np.empty((part.paths, part.steps)))
-            rows[path : path + len(numbers), step : step + numbers.shape[1]] = numbers
-    return part.first_path, part.first_step, out
+    def _kept(self, kind: str, name: str, shape: tuple[int, ...]) -> NDArray:
+        """An array whose memory is that of the last one of its kind and name, if it is large enough."""
+        size = math.prod(shape)
+        if (kind, name) not in self._room or self._room[kind, name].size < size:
+            self._room[kind, name] = np.empty(size)
+        return self._room[kind, name][:size].reshape(shape)
 
 
 def is_whole(ensemble: OnDisk, nodes: Mapping[int, Mapping[str, str]]) -> bool:

@@ -150,7 +150,7 @@ class EnsembleOrigin:
             todo = tasks(self.ensemble, self.spec, self.columns, self.same_draws, engine.size)
             if isinstance(self.ensemble.path, Path):
                 engine.check_sees(str(self.ensemble.path.absolute()))
-            engine.run(Work(todo, WORK, keep, progress, 0, self.rows))
+            engine.run(Work(todo, WORK, keep, progress, 0, self.rows, lambda: plan_for(todo[0])))
         self.faults.sort(key=lambda check: check.probe)
         self._compare_digests(nodes)
         return tree.total(Gather(plan_for(todo[0])))

@@ -5,7 +5,6 @@ from __future__ import annotations
 import math
 from collections.abc import Container, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
-from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -13,11 +12,11 @@ from numpy.typing import NDArray
 from procgen.chance.kernel import is_compiling
 from procgen.checks import copies, extremes, grids, support
 from procgen.checks.blocks import in_few, in_one_pass
+from procgen.checks.prints import equal, fingerprint, weights
 from procgen.checks.verdict import Check
 from procgen.checks.words import many, number
 
-_SHORT = 1024  # steps of a tile whose weights are kept
-_AT_ONCE = 1 << 14  # values of a fingerprint: what is computed on the way stays in the cache
+_AT_ONCE = 1 << 14  # sampled values that are looked at together
 _PATHS, _ENOUGH = 16, 1024  # every so manieth path's, where there are so many left
 _SAMPLE = 61  # every so manieth step's bits are looked at for a detour through float32; at least 32 steps
 _SPACING = {"float32": 2.0**-24 + 4e-16}  # how far, of its size, a stored decimal number may lie from itself
@@ -305,7 +304,7 @@ class Structure:
         for column, what in enumerate(self.series):
             if not what.random:
                 continue
-            copies, first, second = _equal(prints[:, column], paths)
+            copies, first, second = equal(prints[:, column], paths)
             expected = chance_of_equal.get(what.name, 0.0) * math.comb(len(paths), 2)
             if copies and expected > _CERTAIN:
                 note = f"{copies} equal paths, but pairs may be equal by chance: values are rounded or can be held"
@@ -351,17 +350,6 @@ def _note(book: dict[str, list[int]], name: str, where: NDArray, first_path: int
     book[name] = [old[0] + int(np.count_nonzero(where)), *min((old[1], old[2]), place)]
 
 
-def _equal(prints: NDArray, paths: NDArray) -> tuple[int, int, int]:
-    """How many paths repeat an earlier one, and the first such pair."""
-    order = np.argsort(prints, kind="stable")
-    same = prints[order][1:] == prints[order][:-1]
-    if not same.any():
-        return 0, -1, -1
-    at = np.flatnonzero(same)
-    second = at[np.argmin(paths[order[at + 1]])] + 1
-    return int(same.sum()), int(paths[order[second - 1]]), int(paths[order[second]])
-
-
 def _wider(a: Sequence[float] | None, b: Sequence[float]) -> list[float]:
     return list(b) if a is None else [float(np.fmin(a[0], b[0])), float(np.fmax(a[1], b[1]))]
 
@@ -376,40 +364,10 @@ def _looked(
         return None if found[1] else (values, values), (values == 0.0).astype(np.int64) if found[0] else None
     if is_compiling():
         low, high, zeros = found = np.empty((3, len(x)), dtype=np.int64)
-        in_one_pass("looked", np.ascontiguousarray(x), _weights(first_step, len(x)), prints, low, high, zeros)
+        in_one_pass("looked", np.ascontiguousarray(x), weights(first_step, len(x)), prints, low, high, zeros)
         low, high = found[:2].view(float)
     else:
         prints += fingerprint(x, first_step)
         low, high, zeros = x.min(axis=1), x.max(axis=1), np.count_nonzero(x == 0.0, axis=1)
     finite = np.isfinite(low).all() and np.isfinite(high).all()
     return (low, high) if finite else None, zeros
-
-
-def fingerprint(x: NDArray, first_step: int) -> NDArray[np.uint64]:
-    """A 64-bit sum (paths,) over the bits of a tile (steps, paths): equal for equal paths, and it adds over tiles."""
-    bits = np.ascontiguousarray(x, dtype=np.float64).view(np.uint64)
-    weights = _weights(first_step, len(x))
-    total = np.zeros(x.shape[1], dtype=np.uint64)
-    count = max(_AT_ONCE // x.shape[1], 1)
-    for start in range(0, len(x), count):
-        part = bits[start : start + count]
-        mixed = part ^ (part >> np.uint64(32))
-        mixed *= weights[start : start + count, None]
-        total += mixed.sum(axis=0, dtype=np.uint64)
-    return total
-
-
-def _weights(first_step: int, steps: int) -> NDArray[np.uint64]:
-    """An odd number for each step, the same for all series."""
-    return _kept_weights(first_step, steps) if steps <= _SHORT else _made_weights(first_step, steps)
-
-
-def _made_weights(first_step: int, steps: int) -> NDArray[np.uint64]:
-    step = np.arange(first_step, first_step + steps, dtype=np.uint64)
-    x = step * np.uint64(0x9E3779B97F4A7C15) + np.uint64(0x632BE59BD9B4E019)
-    x = (x ^ (x >> np.uint64(30))) * np.uint64(0xBF58476D1CE4E5B9)
-    x = (x ^ (x >> np.uint64(27))) * np.uint64(0x94D049BB133111EB)
-    return (x ^ (x >> np.uint64(31))) | np.uint64(1)
-
-
-_kept_weights = lru_cache(256)(_made_weights)  # each range of paths, and each series, has tiles of the same steps

@@ -32,6 +32,7 @@ _OUTCOMES = {"agrees": "agree", "departs": "depart"}  # of several
 _MORE_LESS = {"level": ("higher than", "lower than"), "spread": ("larger than", "smaller than")}
 _SIGNED = ("mean", "variance", "level score", "spread score")  # how the checks end whose sign says more or less
 BALANCE = "shocks: balance of paths"
+COSINES, SINES = "mean cosine of values", "mean product of sines of values"
 START, SCATTER = "size of the start", "scatter of the start"
 _BETWEEN_PATHS = ("neighbouring paths", BALANCE)  # how the checks end
 _WHOLE = {
@@ -201,6 +202,9 @@ def _says(top: Check) -> str:
         return "paths are not independent of each other"
     if top.what == START:
         return f"the series starts {'narrower' if (top.estimate or 0.0) < 0 else 'wider'} than it goes on"
+    if top.what == COSINES:
+        wider = (top.estimate or 0.0) < (top.theory or 0.0)
+        return f"values are spread {'wider' if wider else 'less wide'} than stated"
     if top.what == SCATTER:
         return "paths start with variances that are not spread as those they go on with"
     way = "not the one"

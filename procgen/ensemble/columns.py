@@ -8,6 +8,8 @@ from typing import Any
 
 import numpy as np
 
+from procgen.chance import kernel
+from procgen.chance.blocks import CHUNK
 from procgen.ensemble.errors import EnsembleError
 
 TYPES = {"float64": 8, "float32": 4, "int64": 8}
@@ -99,18 +101,28 @@ def _as_whole(values: np.ndarray, column: Column, memory: np.ndarray) -> np.ndar
     stays in the processor's cache.
     """
     whole = memory.view(np.int64)
+    if kernel.is_compiling() and values.flags.c_contiguous and whole.flags.c_contiguous:
+        flat, stopped = values.reshape(-1), np.empty(1, np.int64)
+        kernel.machine("compiled", "whole")(flat, whole.reshape(-1), WHOLE, stopped, np.empty(CHUNK))
+        if stopped[0] < flat.size:
+            raise _not_whole(flat[stopped[0] : stopped[0] + CHUNK], column)
+        return whole
     paths = max(AT_ONCE // max(values.shape[-1], 1), 1)
     for first in range(0, len(values), paths):
         given = values[first : first + paths]
         found = np.rint(given)
         if given.size and not (-WHOLE <= given.min() <= given.max() <= WHOLE and (found == given).all()):
-            bad = given[(np.abs(given) > WHOLE) | (np.rint(given) != given)]
-            raise EnsembleError(
-                f"series {column.name} is stored as int64, as whole numbers are, and the value {float(bad[0])!r} "
-                "is not a whole number of at most 2^53 in size; write type: float64 for it in the spec"
-            )
+            raise _not_whole(given, column)
         np.copyto(whole[first : first + paths], found, casting="unsafe")
     return whole
+
+
+def _not_whole(values: np.ndarray, column: Column) -> EnsembleError:
+    bad = values[(np.abs(values) > WHOLE) | (np.rint(values) != values)]
+    return EnsembleError(
+        f"series {column.name} is stored as int64, as whole numbers are, and the value {float(bad[0])!r} "
+        "is not a whole number of at most 2^53 in size; write type: float64 for it in the spec"
+    )
 
 
 def _refuse(bad: np.ndarray, values: np.ndarray, column: Column) -> None:

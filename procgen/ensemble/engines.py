@@ -4,7 +4,8 @@ A task is data for JSON, and the work is a function named as "module:function", 
 returns a list of records, data for JSON too: rendering draws a chain, validation sums one up. Workers are plain child
 processes that read tasks and write records as lines of JSON. So a caller's script needs no
 `if __name__ == "__main__"`, nothing is forked under running threads, and no pickle is read. The calling process works
-too: while workers import (0.2 s) it is already at it.
+too: while workers import (0.2 s) it is already at it. A command forks its workers where that is safe (`forked`), before
+any thread is begun.
 """
 
 from __future__ import annotations
@@ -21,8 +22,9 @@ from collections import deque
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from types import FrameType
-from typing import Any, Protocol
+from typing import Any, Protocol, TextIO
 
+from procgen.ensemble import forked
 from procgen.ensemble.errors import EnsembleError, lacks_memory, system_sentence
 from procgen.ensemble.own import settled
 
@@ -123,6 +125,7 @@ class Work:
     tasks : data for JSON; begun in their order
     name : "module:function" that does a task
     keep : takes the records of a task, as they come, one call at a time
+    ready : makes what all tasks need, where that is worth doing before workers are forked; they do without it, too
     progress : called with (rows done, rows in all); `done` of the `rows` are done at the beginning
     """
 
@@ -132,6 +135,7 @@ class Work:
     progress: Progress | None = None
     done: int = 0
     rows: int = 0
+    ready: Callable[[], object] = lambda: None
 
 
 class Engine(Protocol):
@@ -166,17 +170,23 @@ class Here:
     def run(self, work: Work) -> None:
         crew = Crew(work)
         with crew.interruptible():
-            _work(crew, work.name, min(self.size, len(work.tasks)) - 1, self.inherit, self.advice)
+            _work(crew, work, min(self.size, len(work.tasks)) - 1, self.inherit, self.advice)
         if crew.error is not None:
             raise crew.error
 
 
-def _work(crew: Crew, work: str, helping: int, inherit: int | None, advice: str) -> None:
+def _work(crew: Crew, work: Work, helping: int, inherit: int | None, advice: str) -> None:
     helpers: list[Helper] = []
     try:
+        if forking := helping > 0 and forked.possible():
+            work.ready()
+            settled()
+            forking = forked.possible()  # what was imported may have begun a thread
         for _ in range(helping):
-            helpers.append(Helper(crew, work, inherit, advice))
-        do = function(work)
+            helpers.append(Helper(crew, work.name, inherit, advice, forking))
+        for helper in helpers:
+            helper.start()
+        do = function(work.name)
         settled()
         while (task := crew.next()) is not None:
             crew.keep(do(task, crew.tick))
@@ -227,30 +237,26 @@ def in_threads(
         raise crew.error
 
 
+class Process(Protocol):
+    """A worker process: `subprocess.Popen`, or `Forked`."""
+
+    stdin: TextIO
+    stdout: TextIO
+
+    def wait(self) -> int: ...
+    def terminate(self) -> None: ...
+
+
 class Helper(threading.Thread):
     """Feeds one worker process with tasks, and takes its ticks, records and errors."""
 
-    def __init__(self, crew: Crew, work: str, inherit: int | None, advice: str):
+    def __init__(self, crew: Crew, work: str, inherit: int | None, advice: str, forking: bool = False):
         super().__init__(daemon=True)
         self.crew, self.work, self.advice = crew, work, advice
         try:
-            self.process = self._process(inherit)
+            self.process: Process = forked.Forked(inherit) if forking else _program(inherit)
         except OSError as error:
             raise EnsembleError(system_sentence(error, "starting a worker process")) from None
-        self.start()
-
-    @staticmethod
-    def _process(inherit: int | None) -> subprocess.Popen[str]:
-        return subprocess.Popen(
-            [sys.executable, "-P", "-c", "from procgen.ensemble.worker import main; main()"],
-            stdin=subprocess.PIPE,
-            stdout=subprocess.PIPE,
-            text=True,
-            encoding="utf-8",
-            env={**os.environ, "PYTHONPATH": os.pathsep.join(path or os.getcwd() for path in sys.path)},
-            pass_fds=() if inherit is None else (inherit,),
-            process_group=0 if os.name == "posix" else None,  # Ctrl-C is for this process alone to act on
-        )
 
     def run(self) -> None:
         try:
@@ -260,7 +266,7 @@ class Helper(threading.Thread):
         except Stopped:
             # `end` ends it: with its input closed, it would think us dead and clean up nothing. What it says until then
             # is read, or it would wait for ever to say more than a pipe holds.
-            for _ in self.process.stdout or ():
+            for _ in self.process.stdout:
                 pass
             self.process.wait()
         except BaseException as error:
@@ -269,7 +275,6 @@ class Helper(threading.Thread):
             self._close()
 
     def _send(self, task: Mapping[str, Any]) -> None:
-        assert self.process.stdin is not None
         try:
             self.process.stdin.write(json.dumps({"work": self.work, "task": task}) + "\n")
             self.process.stdin.flush()
@@ -277,7 +282,6 @@ class Helper(threading.Thread):
             pass  # it is dead, and `_receive` says so
 
     def _receive(self) -> Records:
-        assert self.process.stdout is not None
         for line in self.process.stdout:
             message = json.loads(line)
             if "rows" in message:
@@ -293,7 +297,6 @@ class Helper(threading.Thread):
         raise EnsembleError(f"a worker process died ({how}); signal 9 is often a lack of memory: {self.advice}")
 
     def _close(self) -> None:
-        assert self.process.stdin is not None
         try:
             self.process.stdin.close()
         except OSError:
@@ -303,7 +306,23 @@ class Helper(threading.Thread):
         """Wait for the process; one that is still drawing is ended first, and cleans up by itself."""
         if self.is_alive():
             self.process.terminate()
-        self.join()
+        if self.ident is None:  # it never had a task
+            self._close()
+        else:
+            self.join()
         self.process.wait()
-        assert self.process.stdout is not None
         self.process.stdout.close()
+
+
+def _program(inherit: int | None) -> Any:
+    """A worker process begun as a program of its own."""
+    return subprocess.Popen(
+        [sys.executable, "-P", "-c", "from procgen.ensemble.worker import main; main()"],
+        stdin=subprocess.PIPE,
+        stdout=subprocess.PIPE,
+        text=True,
+        encoding="utf-8",
+        env={**os.environ, "PYTHONPATH": os.pathsep.join(path or os.getcwd() for path in sys.path)},
+        pass_fds=() if inherit is None else (inherit,),
+        process_group=0 if os.name == "posix" else None,  # Ctrl-C is for this process alone to act on
+    )

@@ -8,6 +8,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
+from procgen.chance import kernel
 from procgen.chance.streams import STREAM_VERSION
 from procgen.ensemble import engines, manifest, revealed
 from procgen.ensemble.cluster import opened
@@ -18,7 +19,7 @@ from procgen.ensemble.ensemble import Ensemble, Memory, OnDisk
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.layouts import Layout
 from procgen.ensemble.manifest import Manifest, bytes_text
-from procgen.ensemble.part import WORK, Task, row_bytes
+from procgen.ensemble.part import WORK, Task, get_ready, row_bytes
 from procgen.ensemble.places import address
 from procgen.ensemble.plan import Block, Chain, batches, chains, narrow_steps
 from procgen.ensemble.present import Present
@@ -163,7 +164,8 @@ def _in_memory(source: Source, whole: Block, workers: int | None, progress: Prog
     count = default_workers(whole.rows * len(source.columns)) if workers is None else workers
     share = whole.rows * len(source.columns) // count
     # Threads are for compiled kernels: what the interpreter does goes one by one.
-    threads = count if repays(source, narrow, share) else 1
+    compiled = repays(source, narrow, share)
+    threads = count if compiled else 1
     tasks: dict[int, list[Block]] = {}
     for chain in chains(whole, size, threads):
         for part in chain:
@@ -179,7 +181,8 @@ def _in_memory(source: Source, whole: Block, workers: int | None, progress: Prog
         return []
 
     engines.in_threads(draw, [*tasks.values()], threads, progress, whole.rows)
-    stored = {column.name: store(values.pop(column.name), column, spare=True) for column in source.columns}
+    with kernel.compiling(compiled or kernel.is_compiling()):
+        stored = {column.name: store(values.pop(column.name), column, spare=True) for column in source.columns}
     return Memory(stored, source.columns, whole, source.stamps, source)
 
 
@@ -266,7 +269,7 @@ class Job:
                 tasks.append(self._task(chain, start, self.whole.rows * len(self.columns) // engine.size))
         done = sum(Block(**record["part"]).rows for record in records)
         todo = [task.json() for task in tasks]
-        engine.run(Work(todo, WORK, records.extend, progress, done, self.whole.rows))
+        engine.run(Work(todo, WORK, records.extend, progress, done, self.whole.rows, get_ready))
         if self.factory == FACTORY:
             revealed.write(self.folder, self.spec, self.whole, self.identity)
         made = self._make_manifest(records)

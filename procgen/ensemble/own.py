@@ -11,7 +11,7 @@ import gc
 STARTING = 250_000  # objects: more than imports and a plan make
 WORKING = 20_000  # objects since `settled`, which are few and soon looked through
 
-_own = False
+_own = _settled = False
 
 
 def claim() -> None:
@@ -28,6 +28,8 @@ def claimed() -> bool:
 
 def settled() -> None:
     """Of a process of ours, once: what has been made until now stays, and is not looked at again."""
-    if _own and not gc.get_freeze_count():
+    global _settled
+    if _own and not _settled:
+        _settled = True
         gc.freeze()
         gc.set_threshold(WORKING, *gc.get_threshold()[1:])

@@ -12,6 +12,7 @@ from typing import Any
 
 import numpy as np
 
+from procgen.chance import kernel
 from procgen.ensemble import digest
 from procgen.ensemble.columns import Column, as_kept, store
 from procgen.ensemble.draw import Drawer, Tick, empty
@@ -61,6 +62,15 @@ WORK = "procgen.ensemble.part:draw"
 def draw(task: Mapping[str, Any], tick: Tick) -> list[dict[str, Any]]:
     """`render_chain` of a task as data."""
     return render_chain(Task.read(task), tick)
+
+
+def get_ready() -> None:
+    """Import what drawing a part imports, and find where compiled kernels are kept, before workers are forked."""
+    import pyarrow.parquet  # noqa: F401
+
+    import procgen.terms.by_path  # noqa: F401
+
+    kernel.cache_folder()
 
 
 def render_chain(task: Task, tick: Tick = lambda rows: None) -> list[dict[str, Any]]:

@@ -103,6 +103,8 @@ class Term:
     outputs: ClassVar[tuple[str, ...]] = ()
     correlates: ClassVar[bool] = False  # whether its first draw may be named in `correlation`, as those of a noise may
     together: ClassVar[str] = ""  # where its draws cannot be named in `correlation`: how two of it move together
+    leaves_from_last: ClassVar[bool] = False  # whether its `before` is its value at step −1, of which all follows
+    untold: ClassVar[str] = ""  # why a record does not say where it stands, and what to do; empty where nothing is said
     by_rows: ClassVar[tuple[str, ...]] = ()  # parameters that may be rows, one value a path, in `recurse`
     begins_by_rows: ClassVar[bool] = False  # whether `begin`, and what a graph asks before, take such rows too
     finer: ClassVar[str] = ""  # the parameter that says in how many parts its body cuts a step; empty where none does

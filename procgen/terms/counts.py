@@ -36,6 +36,13 @@ class Counts(Term):
     by_rows = ("mean",)
     begins_by_rows = True
 
+    @property
+    def untold(self) -> str:  # type: ignore[override]
+        if self.arity > 1:
+            where = "its counts do not tell where the body of their mean stands"
+            return f"{where}; give the terms in it a `before` of their own"
+        return "its counts have nothing to do with those before"
+
     def law(self) -> Any:
         """The law at the mean `mean`; it can count with other means, too."""
         raise NotImplementedError

@@ -11,7 +11,7 @@ from procgen.chance.laws import LAWS
 from procgen.chance.portable import exp, log1p
 from procgen.chance.tables import GRID, NegativeBinomial, Poisson, Table, thinning, uniforms
 from procgen.chance.thinnings import Thinnings
-from procgen.spec.declare import Parameter, Real
+from procgen.spec.declare import Parameter, Real, Record, Whole
 from procgen.terms.base import Ahead, Draw, Term, number
 from procgen.terms.rows import each_path, row_in
 from procgen.terms.support import COUNTS
@@ -44,7 +44,15 @@ class Inar(Term):
         Parameter(
             "size", "r", Real(above=0), "negative binomial counts with variance μ + μ²/r; Poisson when absent", None
         ),
+        Parameter(
+            "before",
+            "",
+            Record(Parameter("x", "x₋₁", Whole(at_least=0, at_most=MOST), "count at step −1")),
+            "what came before step 0; then step 0 is one step away from it",
+            default=None,
+        ),
     )
+    leaves_from_last = True
 
     @classmethod
     def check(cls, values):
@@ -86,12 +94,17 @@ class Inar(Term):
         return (Draw("innovation", UNIFORM), Draw("thinning", UNIFORM))
 
     def past(self):
+        if self.before is not None:
+            return 1
         return None if self.size is None else 0
 
     def reach(self, head):
-        return (head, head)
+        return (head, head) if self.before is None else (0, 0)
 
     def begin(self, before):
+        if self.before is not None:
+            x = float(self.before["x"])
+            return np.full((before.head, 1), x), {"x": np.full((1, 1), x)}
         if not before.head:
             return None, {}
         # Poisson counts look the same backwards (McKenzie 1985), so the past is drawn from step 0 on down.
@@ -102,7 +115,7 @@ class Inar(Term):
     def recurse(self, inputs, state, at):
         new, stay = (uniforms(rows) for rows in inputs)
         if "x" in state:
-            out = self._moved(self._counts("arrivals", new), stay, state["x"][0])
+            out = self._moved(self._counts("arrivals", new), stay, state["x"][0] + np.zeros(new.shape[1]))
         else:  # step 0 is drawn from the law of the counts
             first = self._counts("first", new[:1])
             out = np.concatenate([first, self._moved(self._counts("arrivals", new[1:]), stay[1:], first[0])])
@@ -158,8 +171,8 @@ class Inar(Term):
 
     def rank(self, values, cell, known, state, at):
         """Given n before, the count is a binomial one of n and the arrivals: the law is their convolution."""
-        values = np.rint(values)
-        first = np.full((1, values.shape[1]), np.nan) if state is None else state["x"]
+        values, known = np.rint(values), np.nan if self.before is None else float(self.before["x"])
+        first = np.full((1, values.shape[1]), known) if state is None else state["x"]
         before, past = np.concatenate([first, values[:-1]]), self.law.distribution()
         lower, upper = (np.where(np.isnan(before), past.cdf(edge), 0.0) for edge in cell)
         for n in np.unique(before[~np.isnan(before)]):
@@ -191,6 +204,8 @@ class Inar(Term):
         return COUNTS
 
     def moments(self, axis, *inputs):
+        if self.before is not None:
+            return self._given(axis, float(self.before["x"]))
         alpha, mean, law = self.alpha, self.mean, self.law
         central = dict(enumerate((1.0, 0.0, *law.central)))
 
@@ -215,11 +230,40 @@ class Inar(Term):
             law=lambda step: law.distribution(), moment=moment, discrete=True,
         )  # fmt: skip
 
+    def _given(self, axis, n):
+        """Moments from a count of n at step −1: of these α^(t+1) stay on average, and the rest is as it always is."""
+
+        def left(steps):
+            return self.alpha ** np.maximum(steps + 1.0, 0.0)
+
+        def mean(steps):
+            return self.mean + left(steps) * (n - self.mean)
+
+        def covariance(t, s):
+            p = left(np.minimum(t, s))
+            new = self.law.variance * (1.0 - p * p) - self.mean * p * (1.0 - p)
+            return self.alpha ** np.abs(t - s).astype(float) * (new + p * (1.0 - p) * n)
+
+        why = f"{self.address} leaves from its count at step −1"
+        law = self._law_after if self.size is None else None
+        return axis.stated(self.address, UNIFORM, mean, covariance, law=law, discrete=True, varies=why)
+
+    def _law_after(self, step):
+        """A binomial count of those before and a Poisson one of those since (McKenzie 1985)."""
+        from scipy import stats
+
+        p, n = self.alpha ** (step + 1.0), int(self.before["x"])
+        new = np.arange(int(_reach(self.mean, np.inf)) + 1)
+        chances = np.convolve(stats.binom(n, p).pmf(np.arange(n + 1)), stats.poisson(self.mean * (1.0 - p)).pmf(new))
+        return stats.rv_discrete(values=(np.arange(len(chances)), chances / chances.sum()))
+
     def equation(self, *inputs):
         margin = f"Poisson of mean {number(self.mean)}"
         if self.size is not None:
             margin = f"negative binomial of mean {number(self.mean)} and size {number(self.size)}"
-        return f"x[t] = {number(self.alpha)}∘x[t−1] + a[t],  n∘ counts who of n stay,  a such that x is {margin}"
+        begins = "" if self.before is None else f",  x[−1] = {number(self.before['x'])}"
+        what = f"a such that x is {margin}{' in the end' if begins else ''}"
+        return f"x[t] = {number(self.alpha)}∘x[t−1] + a[t],  n∘ counts who of n stay,  {what}{begins}"
 
 
 def _reach(mean, size):

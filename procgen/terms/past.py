@@ -13,7 +13,6 @@ from typing import Any, NoReturn
 
 import numpy as np
 
-from procgen.chance.portable import log
 from procgen.spec.entries import walk
 from procgen.spec.model import Entry, Fault, Frozen, Place, Series, Spec, SpecError
 from procgen.spec.varying import varying_of
@@ -23,6 +22,7 @@ from procgen.terms.open_start import OPEN
 from procgen.terms.past_filter import StateSpace, Through, factor, filtered
 from procgen.terms.past_parts import Part, part_of, recursion_of, unscaled
 from procgen.terms.past_single import single
+from procgen.terms.shape import Logit, Sigmoid
 
 KEPT = 32  # series whose conditioning is kept, for the graphs that are built again
 _kept: OrderedDict[int, tuple[Series, Series, Left]] = OrderedDict()
@@ -92,7 +92,7 @@ class _Departure:
         self._refuse_misfits()
         rest = self.past - self._known_values()
         entry, node = self.random[0]
-        if len(self.random) == 1 and isinstance(node.term, Exp):
+        if len(self.random) == 1 and isinstance(node.term, Exp | Sigmoid | Logit):
             return self._within(entry, node, rest / entry.times)
         parts = [part_of(entry, node) for entry, node in self.random]
         recursion = recursion_of(node.term)
@@ -113,15 +113,22 @@ class _Departure:
         return replace(self.one, of=(*body, *extra), before=None), left
 
     def _within(self, entry: Entry, node: Node, values: Array) -> tuple[Series, Left]:
-        """The series whose only random part is an exponential: its body leaves from the logarithms of that part."""
-        if not np.all(values > 0.0):
+        """The series whose only random part is an exponential or an S-curve: its body leaves from what that undoes."""
+        if isinstance(node.term, Exp) and not np.all(values > 0.0):
             worst = int(np.argmin(values))
             _refuse(
                 entry.place,
                 f"the past of {self.name} is not one of {node.name}: expected values above 0, as an exponential has, "
                 f"got {float(values[worst])!r} at step {worst - len(values)} when what is known beside it is taken off",
             )
-        inner = replace(self.one, of=entry.bodies["of"], before=tuple(log(values).tolist()))
+        undone = node.term.invert(values[:, None], [None], None, np.arange(-len(values), 0))
+        if isinstance(undone, Unknown):
+            _refuse(
+                entry.place,
+                f"the past of {self.name} is not one of {node.name}: {undone.reason}, when what is known beside it is "
+                "taken off",
+            )
+        inner = replace(self.one, of=entry.bodies["of"], before=tuple(undone[0][:, 0].tolist()))
         told, left = _Departure(self.plain, self.name, inner).made()
         new = replace(entry, bodies=Frozen({**entry.bodies, "of": told.of}))
         body = tuple([new if e is entry else e for e in self.one.of])

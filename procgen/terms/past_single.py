@@ -15,7 +15,7 @@ from procgen.chance.portable import exp
 from procgen.spec.model import Entry, Frozen
 from procgen.terms import egarch, garch, gjr
 from procgen.terms.arma import inversion
-from procgen.terms.base import Array, Node, Unknown
+from procgen.terms.base import Array, Node, Unknown, number
 from procgen.terms.conditional import FORGOTTEN, Conditional
 from procgen.terms.noise import WhiteNoise
 from procgen.terms.past_parts import Recursion, recursion_of, told_before
@@ -31,7 +31,11 @@ def single(entry: Entry, node: Node, x: Array) -> Told | Unknown:
         if alone is entry and why:
             return Unknown(f"nothing of it is told by its values ({why[0]}); remove before at the series")
         return alone, why
+    if node.term.leaves_from_last:
+        return _from_last(entry, node.term, x)
     recursion = recursion_of(node.term)
+    if recursion is None and node.term.untold:
+        return Unknown(f"{node.term.untold}; remove before at the series")
     if recursion is None:
         return Unknown(f"{node.term.kind} cannot be told where it stands; remove before at the series{_own(node.term)}")
     needs = len(recursion.phi) + len(recursion.delta)
@@ -49,6 +53,18 @@ def single(entry: Entry, node: Node, x: Array) -> Told | Unknown:
     elif not isinstance(noise, WhiteNoise):
         said = (f"the variance of {node.name}: the record is too short to tell a shock",)
     return left, said
+
+
+def _from_last(entry: Entry, term: Any, x: Array) -> Told | Unknown:
+    """An entry of which all that comes follows from its last value, where its values can be such."""
+    possible = term.support()
+    for back, value in enumerate(x[::-1].tolist(), start=1):
+        inside = possible.low < value if possible.above else possible.low <= value
+        if not inside or (possible.step and not possible.on(value)):
+            allowed = "whole numbers from 0" if possible.step else f"numbers above {number(possible.low)}"
+            return Unknown(f"its values are {allowed}, and the record has {value!r} at step {number(-back)}; mend it")
+    last = round(float(x[-1])) if possible.step else float(x[-1])
+    return replace(entry, values=Frozen({**entry.values, "before": Frozen({"x": last})})), ()
 
 
 def _own(term: Any) -> str:

@@ -11,7 +11,7 @@ from procgen.chance.kernel import kernel
 from procgen.chance.laws import LAWS, Normal
 from procgen.chance.portable import exp, log
 from procgen.chance.tables import Poisson, uniforms
-from procgen.spec.declare import Parameter, Real
+from procgen.spec.declare import Parameter, Real, Record
 from procgen.terms.base import Ahead, Draw, Term, Unknown, number, signed
 from procgen.terms.jumps import Jumped
 from procgen.terms.support import POSITIVE
@@ -26,6 +26,13 @@ START = Parameter("start", "x₀", Real(above=0), "value at step 0", default=1.0
 COARSE = 0.02  # rounding beyond this share of a step's volatility blurs where the price was
 FAR = 4.0  # volatilities: hardly any shock moves a price so far in a step, most jumps do
 NO_PAST = "its jumps begin after step 0; lag less"
+BEFORE = Parameter(
+    "before",
+    "",
+    Record(Parameter("x", "x₋₁", Real(above=0), "value at step −1", unit="series")),
+    "where it leaves from; then step 0 is one step away from there, and `start` is not used",
+    default=None,
+)
 
 
 class Brownian(Term):
@@ -114,6 +121,7 @@ class Merton(Term):
     correlates = True
     outputs = ("jumps",)
     no_past = NO_PAST
+    leaves_from_last = True
     parameters: ClassVar[tuple[Parameter, ...]] = (
         DRIFT,
         SD,
@@ -121,19 +129,32 @@ class Merton(Term):
         Parameter("jump_mean", "m", Real(at_least=-5, at_most=5), "mean of the logarithm's jump", default=0.0),
         Parameter("jump_sd", "δ", Real(above=0, at_most=5), "standard deviation of the logarithm's jump"),
         START,
+        BEFORE,
     )
+
+    @property
+    def level(self):
+        """The known value that it leaves from: that of step −1, or of step 0."""
+        return self.start if self.before is None else self.before["x"]
+
+    @property
+    def moved(self):
+        """Steps that it has moved at step 0."""
+        return 0 if self.before is None else 1
 
     def draws(self):
         return (Draw("innovation", NORMAL), Draw("count", UNIFORM), Draw("size", NORMAL))
 
     def past(self):
-        return 0
+        return self.moved
 
     def reach(self, head):
-        return (head,) * 3
+        return (0,) * 3
 
     def begin(self, before):
-        return None, {}
+        if self.before is None:
+            return None, {}
+        return np.full((before.head, 1), float(self.level)), {"x": np.zeros((1, 1))}
 
     def step_drift(self):
         """What the logarithm gains in a step without shock and jump: its jumps are paid for in the mean."""
@@ -145,11 +166,11 @@ class Merton(Term):
         jumps, first = Poisson(self.rate).counts(uniforms(count)), int("x" not in state)
         logs = np.empty_like(jumps)
         logs[:first], jumps[:first] = 0.0, 0.0  # step 0 is the start itself
-        x = np.zeros(jumps.shape[1]) if first else state["x"][0]
+        x = np.zeros(jumps.shape[1]) + (0.0 if first else state["x"][0])
         numbers = self.step_drift(), self.sd, self.jump_mean, self.jump_sd
         x = jumping(*(rows[first:] for rows in (z, jumps, size)), *numbers, x, logs[first:])
         prices = exp(logs, out=logs)
-        return {"": np.multiply(prices, self.start, out=prices), "jumps": jumps}, {"x": x[None, :]}
+        return {"": np.multiply(prices, self.level, out=prices), "jumps": jumps}, {"x": x[None, :]}
 
     def change(self, steps=1):
         """The law of the logarithm's change over some steps."""
@@ -163,21 +184,25 @@ class Merton(Term):
         if np.max((cell[1] - cell[0]) / values) > COARSE * self.sd:
             return Unknown(f"values of {self.address} are rounded too coarsely for the change of a step")
         logs, law = np.log(values), self.change().distribution()
-        first = np.full((1, values.shape[1]), np.nan) if state is None else state["x"]
+        first = self._log_before(values) if state is None else state["x"]
         before = np.concatenate([first, logs[:-1]])
         lower, upper = (law.cdf(np.log(edge) - before) for edge in cell)
         return (lower, upper), {"x": logs[-1:]}
+
+    def _log_before(self, values):
+        """The logarithm at step −1 where it is known, else NaN."""
+        return np.full((1, values.shape[1]), np.log(self.level) if self.moved else np.nan)
 
     @property
     def watched(self):
         return (f"changes beyond {FAR:g}σ",)
 
     def shown(self, output):
-        return Jumped(self.rate, first=1) if output == "jumps" else None
+        return Jumped(self.rate, first=1 - self.moved) if output == "jumps" else None
 
     def events(self, values, cell, known, state, at):
         law, logs = self.change().distribution(), np.log(values)
-        first = np.full((1, values.shape[1]), np.nan) if state is None else state["x"]
+        first = self._log_before(values) if state is None else state["x"]
         moved = np.abs(np.diff(np.concatenate([first, logs]), axis=0) - self.step_drift())
         beyond = law.cdf(self.step_drift() - FAR * self.sd) + law.sf(self.step_drift() + FAR * self.sd)
         return ((moved > FAR * self.sd, np.where(np.isnan(moved), np.nan, beyond)),)
@@ -186,7 +211,7 @@ class Merton(Term):
         first = 1 if "x" in state else 0
         count = np.arange(first, first + len(steps), dtype=float)[:, None]
         now = np.exp(state["x"]) if "x" in state else np.ones((1, 1))
-        mean = self.start * now * np.exp(self.drift * count)
+        mean = self.level * now * np.exp(self.drift * count)
         return Ahead(mean, mean * mean * np.expm1(self._growth() * count))
 
     def _growth(self):
@@ -200,14 +225,15 @@ class Merton(Term):
 
     def moments(self, axis, *inputs):
         def mean(steps):
-            return np.where(steps < 0, np.nan, self.start * np.exp(self.drift * steps))
+            steps = steps + self.moved
+            return np.where(steps < 0, np.nan, self.level * np.exp(self.drift * steps))
 
         def covariance(t, s):
-            return mean(t) * mean(s) * np.expm1(self._growth() * np.minimum(t, s))
+            return mean(t) * mean(s) * np.expm1(self._growth() * (np.minimum(t, s) + self.moved))
 
         price = axis.stated(
             self.address, NORMAL, mean, covariance, grows=f"{self.address} moves on from where it is",
-            law=lambda step: self.change(step).distribution(self.start),
+            law=lambda step: self.change(step + self.moved).distribution(self.level),
         )  # fmt: skip
         poisson = (0.0, 1.0), (0.0, 1.0), (0.0, 1.0, 3.0)
         rate, key = axis.known(self._rate_at), f"{self.address}.jumps"
@@ -215,9 +241,10 @@ class Merton(Term):
         return axis.offering(price, jumps=jumps)
 
     def _rate_at(self, steps):
-        return np.where(steps == 0, 0.0, self.rate)
+        return np.where(steps < 1 - self.moved, 0.0, self.rate)
 
     def equation(self, *inputs):
         jump = f"N[t] jumps of N({number(self.jump_mean)}, {number(self.jump_sd)}²)"
         step = f"ln x[t−1] {signed(self.step_drift(), '')} + {number(self.sd)} z[t] + {jump}"
-        return f"ln x[t] = {step},  N Poisson of mean {number(self.rate)},  x[0] = {number(self.start)}"
+        begins = f"x[{number(-self.moved)}] = {number(self.level)}"
+        return f"ln x[t] = {step},  N Poisson of mean {number(self.rate)},  {begins}"

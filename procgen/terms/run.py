@@ -5,7 +5,7 @@ A `Run` is a pure function of the graph and the range: how its steps are cut int
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from functools import partial
 from typing import Any
 
@@ -35,6 +35,7 @@ class Run:
         self.step = 0
         self.columns: dict[str, Node] = {**graph.series, **{name: graph.resolve(name) for name in reveal}}
         self._order = graph.order(list(self.columns.values()), drawn=True)
+        self._spent = spent(self._order, self.columns.values())
         self._states: dict[str, State] = {}
         self._begun: dict[Any, Any] = {}
         self._joint: dict[int, list[tuple[Array, Array]]] = {}
@@ -48,7 +49,7 @@ class Run:
             parts = [self.tile(min(most, steps - first)) for first in range(0, steps, most)]
             return {name: np.concatenate([part[name] for part in parts]) for name in self.columns}
         at = np.arange(self.step, self.step + steps)
-        values, self._states = self._advance(self._order, at)
+        values, self._states = self._advance(self._order, at, self._spent)
         self.step += steps
         shape = (steps, self.paths)
         found = {name: values[id(node)] for name, node in self.columns.items()}
@@ -75,9 +76,12 @@ class Run:
     # forward
 
     def _advance(
-        self, order: Sequence[Any], steps: Array, pace: int = 1
+        self, order: Sequence[Any], steps: Array, spent: Mapping[int, Sequence[int]], pace: int = 1
     ) -> tuple[dict[int, Array], dict[str, State]]:
-        """Values at `steps` of what has this pace, and at as many more of what has a faster one."""
+        """Values at `steps` of what has this pace, and at as many more of what has a faster one.
+
+        What is `spent` is let go at once: its memory, still in the processor's cache, is had by what comes next.
+        """
         values: dict[int, Any] = {}
         hidden: dict[int, dict[str, Array]] = {}
         states: dict[str, State] = {}
@@ -95,6 +99,10 @@ class Run:
                     hidden[id(node)] = out
                     out = out[""]
                 values[id(node)] = out
+                del inputs, out
+            for part in spent.get(id(node), ()):
+                values.pop(part, None)
+                hidden.pop(part, None)
         return values, {**self._states, **states}
 
     def _draw(self, source: Source, first_step: int, steps: int, values: dict[int, Array]) -> None:
@@ -157,7 +165,8 @@ class Run:
         return np.zeros((0, 1)) if rows is None else rows
 
     def _peek(self, node: Any) -> Array:
-        values, _ = self._advance(self.graph.order([node], drawn=True), np.array([0]), node.pace)
+        order = self.graph.order([node], drawn=True)
+        values, _ = self._advance(order, np.array([0]), spent(order, [node]), node.pace)
         return values[id(node)]
 
     def _joint_rows(self, node: Node) -> tuple[Array, Array]:
@@ -192,6 +201,20 @@ class Run:
 
 
 LARGEST = 1 << 18  # values that a term with finer steps has at once
+
+
+def spent(order: Sequence[Any], wanted: Iterable[Any]) -> dict[int, list[int]]:
+    """For each node, by its id, whose values nobody reads after it."""
+    last: dict[int, int] = {}
+    for node in order:
+        read = (node.group.by,) if isinstance(node, Source) and node.group else getattr(node, "inputs", ())
+        last.update((id(part), id(node)) for part in read)
+    kept = {id(node) for node in wanted}
+    found: dict[int, list[int]] = {}
+    for part, node in last.items():
+        if part not in kept:
+            found.setdefault(node, []).append(part)
+    return found
 
 
 def within(steps: Array, times: int) -> Array:

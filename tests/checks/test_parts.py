@@ -119,10 +119,23 @@ def test_a_number_of_workers_must_be_one(tmp_path):
         validate(ensemble, workers=0)
 
 
+SLOWLY = """
+import time
+from procgen import cli
+from procgen.checks import parts
+gather = parts.gather_chain
+def slowly(task, tick):
+    time.sleep(0.5)
+    return gather(task, tick)
+parts.gather_chain = slowly
+cli.main()
+"""
+
+
 def started(out):
-    """A validation by two processes, and the number of its worker process."""
+    """A validation by two processes, forked and in no hurry, and the number of its worker process."""
     process = subprocess.Popen(
-        [sys.executable, "-m", "procgen", "validate", str(out), "--workers", "2"],
+        [sys.executable, "-c", SLOWLY, "validate", str(out), "--workers", "2"],
         stdout=subprocess.PIPE,
         stderr=subprocess.PIPE,
         text=True,

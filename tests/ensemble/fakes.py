@@ -109,12 +109,15 @@ def fake_check(path, **how):
 
 ROOT = Path(__file__).resolve().parents[2]
 SCRIPT = """
-import json, sys
-from procgen.ensemble import plan
+import json, os, sys
+os.environ["JE_ARROW_MALLOC_CONF"] = "background_thread:false"
+from procgen.ensemble import own, plan
 from procgen.ensemble.errors import EnsembleError
 from tests.ensemble.fakes import fake_render, fake_spec
 job = json.loads(sys.argv[1])
 plan.PART_BYTES = job.get("part_bytes", plan.PART_BYTES)
+if job["claimed"]:
+    own.claim()  # so that workers are forked where they can be
 if "file_limit" in job:
     import resource, signal
     signal.signal(signal.SIGXFSZ, signal.SIG_IGN)
@@ -128,9 +131,9 @@ except EnsembleError as error:
 """
 
 
-def start(spec, out, part_bytes=plan.PART_BYTES, file_limit=None, **how):
+def start(spec, out, part_bytes=plan.PART_BYTES, file_limit=None, claimed=False, **how):
     """A render in a process of its own, as soon as it is drawing."""
-    job = {"spec": spec, "out": str(out), "part_bytes": part_bytes, "how": how}
+    job = {"spec": spec, "out": str(out), "part_bytes": part_bytes, "claimed": claimed, "how": how}
     job |= {} if file_limit is None else {"file_limit": file_limit}
     command = [sys.executable, "-c", SCRIPT, json.dumps(job)]
     pipe = subprocess.PIPE

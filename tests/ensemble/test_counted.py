@@ -9,6 +9,7 @@ import pyarrow.parquet as pq
 import pytest
 
 import procgen as pg
+from procgen.chance import kernel
 from procgen.ensemble import check_digest
 from procgen.ensemble.columns import Column, store
 from procgen.ensemble.errors import EnsembleError
@@ -17,6 +18,7 @@ from procgen.ensemble.store import MANIFEST, PLAN
 from procgen.terms import supports
 from procgen.terms.graph import build
 
+needs_numba = pytest.mark.skipif(not kernel.available(), reason="numba is not installed")
 NOISE = {"white_noise": {"sd": 1}}
 POISSON = {"poisson": {"mean": 4, "of": [{"ar": {"phi": 0.9, "total_sd": 0.4}}]}}
 SHOP = {
@@ -130,7 +132,13 @@ def test_exports_hold_int64_and_read_back(tmp_path, suffix):
 # nothing is damaged
 
 
-def test_whole_numbers_that_float64_does_not_have_are_refused_with_the_mend():
+@pytest.fixture(params=[False, pytest.param(True, marks=needs_numba)], ids=["plain", "compiled"])
+def either_form(request):
+    with kernel.compiling(request.param):
+        yield
+
+
+def test_whole_numbers_that_float64_does_not_have_are_refused_with_the_mend(either_form):
     spec = {**SHOP, "series": {"far": [{"round": {"of": [{"constant": 2e16}, NOISE]}}]}}
     with pytest.raises(EnsembleError, match=r"series far .* int64.* 2.*e\+16 .* 2\^53 .*; write type: float64"):
         pg.render(spec)
@@ -138,7 +146,7 @@ def test_whole_numbers_that_float64_does_not_have_are_refused_with_the_mend():
     assert pg.render(far)["far"].max() > 2**53
 
 
-def test_a_value_that_is_not_whole_is_never_rounded_away():
+def test_a_value_that_is_not_whole_is_never_rounded_away(either_form):
     kept = store(np.array([[2.0**53, -3.0, -0.0]]), Column("n", "int64", counted=True))
     assert kept.dtype == np.int64 and kept.tolist() == [[2**53, -3, 0]]
     drawn = np.arange(60_000.0).reshape(300, 200)

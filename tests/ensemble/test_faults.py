@@ -163,7 +163,7 @@ part._render_part = once
 
 
 @linux
-@pytest.mark.parametrize("files,workers", [(5, 1), (9, 2)])
+@pytest.mark.parametrize("files,workers", [(5, 1), (7, 2)])
 def test_too_few_open_files(tmp_path, files, workers):
     spec = written(tmp_path, faults.SPEC)
     limit = f"import resource; resource.setrlimit(resource.RLIMIT_NOFILE, ({files}, {files}))"

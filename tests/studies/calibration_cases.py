@@ -130,6 +130,15 @@ def start_of(draw: Draw, n: int) -> Findings:
     return findings
 
 
+def cosines_of(draw: Draw, n: int, known: float) -> Findings:
+    """The mean cosine of numbers of variance 1, of which `known` is the real characteristic function at 1."""
+
+    def findings(rng: Rng, count: int) -> Iterator[tuple[Finding, int]]:
+        return sample_findings(np.cos(draw(rng, (count, n))) - known, None)
+
+    return findings
+
+
 def scatter_of(draw: Draw, n: int) -> Findings:
     """How far the mean square of 12 first values is from 1, less that of four times 12 later ones, path by path."""
 
@@ -387,4 +396,6 @@ CASES = (
     Case("scatter of the start, 1,000 of t(4)", 20_000, scatter_of(student(4), 1000), 60_000),
     Case("scatter of the start, 100 of garch (0.10, 0.80)", 20_000, scatter_of(garch(0.1, 0.8), 100), 60_000),
     Case("scatter of the start, 500 flags of share 0.02", 20_000, scatter_of(rare(0.02), 500), 30_000),
+    Case("mean cosine, 100 of Laplace", 2_000_000, cosines_of(laplace, 100, 2 / 3), 100),
+    Case("mean cosine, 1,000 of Laplace", 400_000, cosines_of(laplace, 1000, 2 / 3), 1000),
 )

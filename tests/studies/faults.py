@@ -254,7 +254,7 @@ def main() -> None:
     args = parser.parse_args()
     signals = tuple(signal.Signals[f"SIG{name}"] for name in args.signals.split(","))
     began = time.monotonic()
-    os.environ["OPENBLAS_NUM_THREADS"] = "1"
+    os.environ |= {"OPENBLAS_NUM_THREADS": "1", "JE_ARROW_MALLOC_CONF": "background_thread:false"}  # no threads
     with tempfile.TemporaryDirectory() as folder:
         for what, count in sorted(study(args.moments, args.workers, signals, args.seed, Path(folder)).items()):
             print(f"{count:6} {what}")

@@ -113,6 +113,20 @@ def alike_at_first(x: np.ndarray, size: float, steps: int = 12) -> np.ndarray:
     return out
 
 
+def wider_by_cosine(body: Any, x: np.ndarray, size: float) -> np.ndarray:
+    """Values times a factor that makes the mean cosine, by theory, less by `size`."""
+    from procgen.theory import theory
+    from procgen.theory.characteristic import characteristic
+
+    known = theory(spec_of(body, 1, 10, 1))["x"]
+    sd = math.sqrt(float(known.variance(np.array([5]))[0]))
+
+    def cosine(factor: float) -> float:
+        return characteristic(known.expression, [5], [factor / sd]).real
+
+    return x * optimize.brentq(lambda factor: cosine(1.0) - cosine(factor) - size, 1.0, 3.0)
+
+
 def swayed(x: np.ndarray, size: float, length: int) -> np.ndarray:
     """The mean of each stretch of so many steps made larger: the variance of its sum is 1 + size times what it was."""
     whole = x.shape[1] // length * length

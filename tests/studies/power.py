@@ -51,10 +51,12 @@ from tests.studies.plants import (
     swayed,
     t,
     widened,
+    wider_by_cosine,
 )
 
 LEVEL = 0.001
 WALK = [{"random_walk": {"sd": 1}}]
+FAT = [{"ar": {"phi": 0.7, "sd": 1}}, {"white_noise": {"sd": 0.5, "law": t(4)}}]
 GARCH = [{"garch": {"omega": 0.05, "alpha": 0.10, "beta": 0.85}}]
 SEASON = [{"seasonal": {"period": 12, "harmonics": [{"amplitude": 1, "peak": 3}]}}, {"white_noise": {"sd": 1}}]
 HEAVY = [{"constant": 0}, {"ar": {"phi": 0.6, "total_sd": 1, "law": t(9)}}, {"white_noise": {"sd": 0.5}}]
@@ -199,6 +201,7 @@ PLANTS = (
           by="paths mixed with their neighbour"),
     Plant("size of the start", "steps 0–1", ar(law=t(9)), spoilt(ar(law=t(9)), lambda x, d, _: begun(x, d)),
           by="sd of the first values"),
+    Plant("mean cosine of values", "11 steps", FAT, spoilt(FAT, lambda x, d, _: wider_by_cosine(FAT, x, d)), by="sd"),
     Plant("scatter of the start", "steps 0–11", GARCH, spoilt(GARCH, lambda x, d, _: alike_at_first(x, d)),
           by="mean squares of the first values"),
     Plant("shocks: balance of paths", "sum over steps", noise(), spoilt(noise(), lambda x, d, _: evened(x, d)),
