@@ -42,13 +42,15 @@ def run(app: typer.Typer) -> NoReturn:
     """Run the app and end the process with its exit code, without a traceback whatever happens.
 
     The matrices here are small: threads of a linear algebra library only wait for each other, and much so beside
-    other work. A process with one thread can be forked; pyarrow begins another for an allocator that it does not use.
+    other work. A process with one thread can be forked; pyarrow begins another for an allocator that it does not use,
+    and gives memory back after each column that it reads, for the system to clear it again for the next one.
     Being asked to end is taken as Ctrl-C is, so that a render stops between two parts.
     """
     claim()
     for library in ("OPENBLAS", "OMP", "MKL"):
         os.environ.setdefault(f"{library}_NUM_THREADS", "1")
     os.environ.setdefault("JE_ARROW_MALLOC_CONF", "background_thread:false")
+    os.environ.setdefault("MIMALLOC_PURGE_DELAY", "-1")
     signal.signal(signal.SIGTERM, signal.default_int_handler)
     try:
         app()

@@ -8,6 +8,7 @@ lane, and where its tiles begin, does not show in the sums.
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Mapping
+from contextlib import nullcontext
 from itertools import chain
 
 import numpy as np
@@ -211,7 +212,7 @@ class Pass:
 
     def absorb(self, first_path: int, first_step: int, values: Mapping[str, NDArray]) -> None:
         """Add a block. Raises ValueError when it does not follow the last one of its paths."""
-        with kernel.compiling(self.compile or kernel.is_compiling()):
+        with nullcontext() if self.compile == kernel.is_compiling() else kernel.compiling():
             for first, end in ranges(first_path, first_path + len(values[self.plan.names[0]])):
                 lane = self._lane(first, end - first, first_step)
                 lane.absorb({n: values[n][first - first_path : end - first_path] for n in self.plan.names}, self.tick)
