@@ -16,6 +16,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.checks.blocks import scratch
 from procgen.checks.pools import Pool, PoolLane
 from procgen.checks.probes import SeriesPlan, plan_series
 from procgen.checks.sums import Powers
@@ -55,10 +56,13 @@ class Relation:
         return " ".join(signed(w, name) for name, w in self.weights.items()).removeprefix("+ ")
 
     def values(self, tiles: Mapping[str, NDArray]) -> NDArray:
-        """The combination from tiles (steps, paths) of all series."""
-        total: Any = 0.0
-        for name, weight in self.weights.items():
-            total = total + weight * tiles[name]
+        """The combination from tiles (steps, paths) of all series, in memory that the next one takes again."""
+        (name, first), *others = self.weights.items()
+        steps, paths = tiles[name].shape
+        total, part = scratch(steps, paths, 2), scratch(steps, paths, 3)
+        np.multiply(first, tiles[name], out=total)
+        for name, weight in others:
+            total += np.multiply(weight, tiles[name], out=part)
         return total
 
     def checks(self, powers: Powers) -> Iterator[Check]:
