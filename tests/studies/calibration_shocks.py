@@ -109,7 +109,8 @@ def worst_path(what: str, paths: int, steps: int) -> Findings:
         g = rng.standard_normal((steps, count, paths))
         square = np.einsum("tcp,tcp->cp", g, g)
         slope = np.einsum("tcp,tcp->cp", g[1:], g[:-1]) / square * math.sqrt(steps + 2)
-        z = {"level": g.sum(axis=0) / math.sqrt(steps), "spread": apart.spreads(square, steps), "memory": slope}
+        spread = apart.spreads(square.ravel(), np.full(square.size, float(steps))).reshape(square.shape)
+        z = {"level": g.sum(axis=0) / math.sqrt(steps), "spread": spread, "memory": slope}
         for row in np.flatnonzero(np.abs(z[what]).max(axis=1) > (0.8 if what == "memory" else 0.9) * near):
             level, spread, memory = (each[row] for each in z.values())
             sums = np.array([paths, level @ level, spread @ spread, level.sum(), spread.sum()])
