@@ -120,7 +120,8 @@ def _render_part(task: Task, part: Block, source: Source, drawer: Drawer, folder
             if not buffers or buffers[columns[0].name].shape != (batch.paths, batch.steps):
                 buffers = empty(batch, columns)
             drawer.fill(batch, buffers)
-            stored = {column.name: store(buffers[column.name], column) for column in columns}
+            with kernel.compiling(drawer.compile or kernel.is_compiling()):
+                stored = {column.name: store(buffers[column.name], column) for column in columns}
             digests.add(batch, buffers, stored)
             writer.write(batch, stored)
             if last and batch.end_step == part.end_step:
