@@ -94,6 +94,7 @@ SETTINGS = (
     Setting("NumPy without AVX-512", off=WIDEST),
     Setting("compiled", compiled=True),
     Setting("compiled, step by step", compiled=True, constants={"procgen.chance.kernel._NARROW": 0}),
+    Setting("compiled, path by path", compiled=True, constants={"procgen.chance.kernel._NARROW": 256}),
     Setting(
         "compiled for any processor",
         compiled=True,
