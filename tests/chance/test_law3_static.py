@@ -57,6 +57,9 @@ EXEMPT_PLACES = {
     ("terms/vector_shapes.py", "_correlation_faults"),
     ("terms/labels.py", "entry_named"),  # a number of entries
     ("terms/gjr.py", "_without_variance"),
+    ("terms/inar.py", "_given"),  # moments
+    ("terms/inar.py", "_law_after"),
+    ("terms/prices.py", "_log_before"),  # of `rank`
     ("chance/laws/points.py", "std"),
     ("spec/local.py", "places"),  # a running sum of whole numbers
 }
@@ -64,7 +67,7 @@ EXEMPT_PLACES = {
 COMPILERS = {
     f"chance/{name}.py"
     for name in ("kernel", "machine", "passing", "compiled", "compiled_elementary", "compiled_passing")
-}
+} | {"checks/crossed.py"}
 
 ELEMENTARY = set(
     "exp exp2 expm1 log log2 log10 log1p logaddexp logaddexp2 sin cos tan arcsin arccos arctan arctan2 asin acos atan "

@@ -191,7 +191,7 @@ def test_pages_behind_a_url_are_refused_before_they_reach_the_reader_of_parquet(
     fake_render(fake_spec(**SPEC), url, workers=1)
     monkeypatch.setattr(pages, "MOST_BYTES", 1 << 10)
     said = fake_check(url).text()
-    assert "is refused: a page of column path would become 160," in said
+    assert "is refused: a page of column path would become 204,800 bytes" in said
     assert "more than 1,024; write it again with pages of usual size, or draw it again with --resume" in said
 
 

@@ -37,11 +37,14 @@ def task(given, tick):
 
     The caller waits for both.
     """
-    one, listens, failed, talks = (Path(given["folder"]) / name for name in ("one", "listens", "failed", "talks"))
+    names = ("one", "waits", "listens", "failed", "talks")
+    one, waits, listens, failed, talks = (Path(given["folder"]) / name for name in names)
     if os.getpid() == given["caller"]:
+        waits.touch()
         until(talks)
         time.sleep(0.5)
     elif is_first(one):
+        until(waits)  # a caller that has not begun by then would begin nothing any more, and end the other at once
         until(listens)
         failed.touch()
         raise EnsembleError("what the first failure says")
