@@ -50,9 +50,9 @@ def test_killed_at_any_moment_then_resumed_gives_the_same_digest(tmp_path, spec,
 @pytest.mark.parametrize("claimed", [False, True], ids=["programs", "forked"])
 @pytest.mark.parametrize("signum", [signal.SIGINT, signal.SIGTERM])
 def test_ctrl_c_and_termination_leave_whole_parts_and_no_process(tmp_path, signum, claimed):
-    spec = WIDE | {"_pause": 0.05}
-    render = start(spec, tmp_path, **PARTS, claimed=claimed, workers=2)
-    for _ in range(3):
+    # so slow that a busy machine cannot finish it between a line that is read and the signal
+    render = start(WIDE | {"_pause": 1.0}, tmp_path, **PARTS, claimed=claimed, workers=2)
+    for _ in range(2):
         render.stdout.readline()
     os.killpg(render.pid, signum)
     _, errors = render.communicate(timeout=60)
@@ -61,7 +61,7 @@ def test_ctrl_c_and_termination_leave_whole_parts_and_no_process(tmp_path, signu
     assert "manifest.json" not in visible(tmp_path)
     if signum == signal.SIGINT:
         assert not list((tmp_path / ".state").glob("*.tmp"))
-    again = fake_render(fake_spec(**spec), tmp_path, resume=True)
+    again = fake_render(fake_spec(**WIDE), tmp_path, resume=True)
     assert again.digest == fake_render(fake_spec(**WIDE)).digest
 
 
