@@ -59,6 +59,7 @@ class Route:
     source: Any = None
     watched: tuple[str, ...] = ()  # events with a known chance that are counted on the way
     ranked: float | None = None  # the grain, which ranks take in exactly, where ranks given the past stand for shocks
+    hidden: bool = False  # whether these ranks follow states that are not seen
     few: Few | None = None  # how shocks of a law of few values are told apart; what comes out are then ranks
     salt: str = ""  # told apart by it: what spreads the values of one seed is not what spreads those of another
     stopped: str = ""  # why a tile could not be undone
@@ -161,6 +162,7 @@ def route(name: str, theory: Any, graph: Any, grain: float, same_draws: bool = T
     from procgen.chance.laws import LAWS
     from procgen.checks.special import ranked
     from procgen.terms.base import Unknown
+    from procgen.terms.hidden_states import HiddenStates
     from procgen.terms.ranks import Ranking
     from procgen.terms.recover import recovery
 
@@ -178,8 +180,9 @@ def route(name: str, theory: Any, graph: Any, grain: float, same_draws: bool = T
         ranks = ranked(graph, name, theory, grain)
         if isinstance(ranks, Ranking):
             words = f"ranks of {name} given its past"
-            watched = ranks.node.term.watched
-            return Route(name, Scores(LAWS["uniform"]()), words, theory, graph, 0.0, ranked=grain, watched=watched)
+            term = ranks.node.term
+            way = Route(name, Scores(LAWS["uniform"]()), words, theory, graph, 0.0, ranked=grain, watched=term.watched)
+            return replace(way, hidden=isinstance(term, HiddenStates))
         return _by_projection(name, theory, graph, grain, undone.reason if ranks is None else ranks.reason)
     words = f"recovered by undoing {name} down to {undone.source.name}"
     few, left = few_of(undone.source.law, recovery(graph, name, 2), grain)

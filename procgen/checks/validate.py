@@ -157,7 +157,7 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
         way = route(name, th[name], graph, grain, same_draws)
         if isinstance(way, Route):
             way.salt = f" of seed {spec.seed}"
-        blind = isinstance(way, Cannot) or way.scores is None
+        blind = _unseen(way)
         plan = plan_series(name, th[name], steps, grain, _periods(graph, name), blind)
         flat = flattened(th, name, steps)
         plan.may_stay = may_stay(th[name], graph, name, flat)
@@ -175,7 +175,9 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
         precision[-1].repeats = repeats_of(plan, way, graph, few, spec.paths * steps) if random else None
     ways = [way for way in routes.values() if isinstance(way, Route) and way.scores is not None]
     pairs = {(a.series, b.series): expected(a, b, th.axis.space) for a, b in list(combinations(ways, 2))[:PAIR_LIMIT]}
-    unseen = [name for name, way in routes.items() if isinstance(way, Cannot) or way.scores is None]
+    hidden = {way.series for way in ways if way.hidden}
+    pairs = {pair: stated for pair, stated in pairs.items() if not (stated.unknown and hidden & {*pair})}
+    unseen = [name for name, way in routes.items() if _unseen(way)]
     grains = {plan.name: plan.grain for plan in series}
     squares = {name: found for name in unseen if (found := plan_squares(th[name], steps, grains[name])) is not None}
     whole = Plan(steps, series, precision, plan_cross(series, th.cross), routes, pairs, squares, gaps)
@@ -183,6 +185,11 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
     whole.relations = plan_relations(graph, th, steps, grains, apart)
     whole.strangers = repeated.strangers(graph, [what.name for what in precision if what.random])
     return missing.adapted(whole, gaps) if gaps else whole
+
+
+def _unseen(way: Route | Cannot) -> bool:
+    """Whether averages along paths tell more than shocks: there are none, or ranks that follow hidden states."""
+    return isinstance(way, Cannot) or way.scores is None or way.hidden
 
 
 def grain_of(declared: Any, theory: Any, steps: int) -> float:

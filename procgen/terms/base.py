@@ -218,6 +218,21 @@ class Term:
         """What answers for a hidden output to ``unranked``, ``rank`` and ``events``, as a term would; None: nothing."""
         return None
 
+    def chained(self, inputs: Sequence[Any]) -> Any:
+        """The source that moves the term's own chain, and the chances of its stages: first, moves, owners; or None."""
+        return None
+
+    def in_state(self, parts: Sequence[Any], state: int | None) -> Any:
+        """The value (`InState`) in a state of its own chain, from those of its inputs at the same step; for checks.
+
+        None where it is not made of that step alone, or not known. The input that moves the chain is None.
+        """
+        return None
+
+    def output_in_state(self, output: str, state: int | None) -> Any:
+        """The same of a hidden output."""
+        return None
+
     def ahead(self, steps: Array, state: State, *inputs: Ahead) -> Ahead | Unknown:
         """Mean and variance at the coming `steps`, given the state just before the first of them."""
         return Unknown(f"{self.kind} has no closed forecast")

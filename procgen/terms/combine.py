@@ -6,6 +6,7 @@ import numpy as np
 
 from procgen.chance.portable import exp, log
 from procgen.spec.declare import Body, Parameter, Text
+from procgen.terms import instate
 from procgen.terms.base import LEAST_LOG, Ahead, Term, Unknown, number
 from procgen.terms.support import POSITIVE, added, finite
 
@@ -38,6 +39,9 @@ class Sum(Term):
             if part is not None:
                 values = values - part
         return values, {}
+
+    def in_state(self, parts, state):
+        return instate.added(parts)
 
     def ahead(self, steps, state, *inputs):
         return Ahead(_added([x.mean for x in inputs]), _added([x.variance for x in inputs]))
@@ -75,6 +79,9 @@ class Scaled(Term):
 
     def invert(self, values, known, state, at):
         return Unknown("a body times 0 is lost") if self.factor == 0 else (values / self.factor, {})
+
+    def in_state(self, parts, state):
+        return parts[0].times(self.factor)
 
     def ahead(self, steps, state, body):
         return Ahead(self.factor * body.mean, self.factor * self.factor * body.variance)
@@ -117,6 +124,9 @@ class Product(Term):
                     return Unknown("a factor is 0 somewhere: what it multiplies is lost there")
                 values = values / part
         return values, {}
+
+    def in_state(self, parts, state):
+        return instate.multiplied(parts)
 
     def support(self, *inputs):
         first, *others = inputs

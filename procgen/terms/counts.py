@@ -12,6 +12,7 @@ from procgen.chance.portable import exp
 from procgen.chance.tables import NegativeBinomial, Poisson, uniforms
 from procgen.spec.declare import Body, Parameter, Real
 from procgen.terms.base import Ahead, Draw, Term, Unknown, number
+from procgen.terms.instate import InState
 from procgen.terms.rows import each_path
 from procgen.terms.support import COUNTS
 
@@ -89,6 +90,12 @@ class Counts(Term):
 
     def unranked(self):
         return ""
+
+    def in_state(self, parts, state):
+        if any(part.shocks for part in parts[:-1]):
+            return None
+        law = self.law().distribution(self.mean * np.exp(parts[0].level) if len(parts) > 1 else None)
+        return InState(0.0, {key: (1.0, source, law) for key, (_, source, _) in parts[-1].shocks.items()})
 
     def rank(self, values, cell, known, state, at):
         law = self.law().distribution(self.mean * np.exp(known[0]) if len(known) > 1 else None)

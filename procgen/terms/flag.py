@@ -8,6 +8,7 @@ from procgen.chance.kernel import kernel
 from procgen.chance.laws import LAWS
 from procgen.spec.declare import Moment, Parameter, Real, Records, Span
 from procgen.terms.base import Ahead, Draw, Term, after_last, number, steps_long
+from procgen.terms.instate import InState
 from procgen.terms.support import BINARY
 
 UNIFORM = LAWS["uniform"]()
@@ -141,6 +142,16 @@ class Flag(Term):
 
     def events(self, values, cell, known, state, at):
         return runs(np.where(np.isnan(values), np.nan, values > 0.0), state, *self.chances, self.stay is not None)
+
+    def chained(self, inputs):
+        if self.spans:
+            return None
+        enter, stay = self.chances
+        moves = np.array([[1.0 - enter, enter], [1.0 - stay, stay]])
+        return inputs[0], (np.array([1.0 - self.share, self.share]), moves, (0, 1))
+
+    def in_state(self, parts, state):
+        return None if state is None else InState(float(state))
 
     def ahead(self, steps, state, *inputs):
         if self.spans:

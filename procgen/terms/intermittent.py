@@ -12,6 +12,7 @@ from procgen.chance.tables import NegativeBinomial, Poisson, uniforms
 from procgen.spec.declare import Body, Choice, Parameter, Real, Span
 from procgen.terms.base import Ahead, Draw, Term, Unknown, number
 from procgen.terms.flag import Flag, runs
+from procgen.terms.instate import InState
 from procgen.terms.support import BINARY, COUNTS, EVERYTHING, Support, finite
 
 UNIFORM = LAWS["uniform"]()
@@ -241,6 +242,15 @@ class ZeroInflated(Term):
 
     def _values(self, body, passes):
         return {"": np.where(passes > 0.0, body, 0.0), "passes": passes}
+
+    def chained(self, inputs):
+        return self.flag.chained(inputs[1:])
+
+    def in_state(self, parts, state):
+        return parts[0] if state else InState(0.0)
+
+    def output_in_state(self, output, state):
+        return InState(float(state))
 
     def shown(self, output):
         return self.flag if output == "passes" else None

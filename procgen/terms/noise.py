@@ -73,6 +73,9 @@ class WhiteNoise(Term):
     def invert(self, values, known, state, at):
         return values / self.scale(), {}
 
+    def in_state(self, parts, state):
+        return parts[0].times(self.scale())
+
     def ahead(self, steps, state, *inputs):
         flat = np.zeros((len(steps), 1))
         if self.law.moment(1) is None:

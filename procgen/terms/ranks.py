@@ -14,6 +14,7 @@ import numpy as np
 from procgen.terms.base import Array, Node, Term, Unknown
 from procgen.terms.combine import Hidden
 from procgen.terms.graph import Graph, Source
+from procgen.terms.hidden_states import hidden_states
 from procgen.terms.operators import Integrate
 from procgen.terms.recover import KnownParts, sources_below
 
@@ -26,6 +27,49 @@ def ranking(graph: Graph, series: str, whole: bool, grain: float) -> Ranking | U
 
     whole: whether the term's values are whole numbers. grain: the distance of neighbouring values as stored, or 0.
     """
+    found = _of_a_term(graph, series, whole, grain)
+    if isinstance(found, Ranking) and (found.plain or not grain):
+        return found
+    followed = _of_hidden_states(graph, series, whole, grain)
+    return found if found is not None and not isinstance(followed, Ranking) else followed
+
+
+def _of_hidden_states(graph: Graph, series: str, whole: bool, grain: float) -> Ranking | Unknown | None:
+    """Ranks of what has a law in each state of chains that are not seen, as far out as there are any."""
+    node: Any = graph.series[series]
+    chain: list[tuple[Node, int]] = []
+    why = None
+    while not isinstance(node, Source):
+        found = hidden_states(graph, node, grain)
+        if isinstance(found, Node):
+            blurred = _blurring(chain, whole) if found.term.lumpy else ()
+            if blurred:
+                return Unknown(f"{blurred[0]} gives {node.name} back only up to rounding, and its values have chances")
+            return Ranking(graph, chain, found, whole, grain)
+        why = why or found
+        below = _undone(graph, node)
+        if below is None:
+            break
+        chain.append((node, below))
+        node = node.inputs[below]
+    return why
+
+
+def _undone(graph: Graph, node: Node) -> int | None:
+    """Which input comes out where a node is undone: the only one that moves by chance; None where it cannot be."""
+    random = [i for i, part in enumerate(node.inputs) if sources_below(graph, part)]
+    return None if len(random) != 1 or type(node.term).invert is Term.invert else random[0]
+
+
+def _blurring(chain: list[tuple[Node, int]], whole: bool) -> list[str]:
+    """The names of what gives values with chances of their own back only up to rounding."""
+    sums = [over.name for over, _ in chain if isinstance(over.term, Integrate)]
+    blurred = [over.name for over, _ in chain if over.term.blurs]
+    return blurred + ([] if whole else sums[1:])  # a second difference of numbers with digits is not exact
+
+
+def _of_a_term(graph: Graph, series: str, whole: bool, grain: float) -> Ranking | Unknown | None:
+    """Ranks that a term gives itself."""
     node: Any = graph.series[series]
     chain: list[tuple[Node, int]] = []
     while not isinstance(node, Source):
@@ -34,17 +78,15 @@ def ranking(graph: Graph, series: str, whole: bool, grain: float) -> Ranking | U
             hidden = [part for part in node.inputs if not isinstance(part, Source) and sources_below(graph, part)]
             if hidden:
                 return Unknown(f"{node.name} follows {hidden[0].name}, which moves by chance and is not seen")
-            sums = [over.name for over, _ in chain if isinstance(over.term, Integrate)]
-            blurred = [over.name for over, _ in chain if over.term.blurs]
-            blurred += [] if whole else sums[1:]  # a second difference of numbers with digits is not exact
+            blurred = _blurring(chain, whole)
             if blurred:
                 return Unknown(f"{blurred[0]} gives {node.name} back only up to rounding, and its values have chances")
             return Ranking(graph, chain, node, whole, grain)
-        random = [i for i, part in enumerate(node.inputs) if sources_below(graph, part)]
-        if len(random) != 1 or type(node.term).invert is Term.invert:
+        below = _undone(graph, node)
+        if below is None:
             return None
-        chain.append((node, random[0]))
-        node = node.inputs[random[0]]
+        chain.append((node, below))
+        node = node.inputs[below]
     return None
 
 

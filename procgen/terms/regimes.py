@@ -14,6 +14,7 @@ from procgen.terms.base import Ahead, Draw, Term, Unknown
 from procgen.terms.combine import Hidden
 from procgen.terms.flag import Flag
 from procgen.terms.followed import Shown
+from procgen.terms.instate import InState
 from procgen.terms.support import EVERYTHING, either, finite
 
 
@@ -119,6 +120,17 @@ class Regimes(Term):
 
     def shown(self, output):
         return Shown(self.chain) if output == "regime" and self.chain is not None else None
+
+    def chained(self, inputs):
+        return None if self.chain is None else (inputs[-1], self.chain.stages)
+
+    def in_state(self, parts, state):
+        if state is None:
+            state = int(parts[-1].level) if np.ndim(parts[-1].level) == 0 else None
+        return None if state is None else parts[state]
+
+    def output_in_state(self, output, state):
+        return InState(float(state)) if output == "regime" else None
 
     def ahead(self, steps, state, *inputs):
         if self.chain is None:

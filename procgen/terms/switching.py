@@ -11,6 +11,7 @@ from procgen.spec.named import Named
 from procgen.terms import markov
 from procgen.terms.base import LAW, Ahead, Draw, Term, number
 from procgen.terms.followed import Shown
+from procgen.terms.instate import InState
 
 
 class SwitchingNoise(Term):
@@ -74,6 +75,15 @@ class SwitchingNoise(Term):
 
     def shown(self, output):
         return Shown(self.chain) if output == "regime" else None
+
+    def chained(self, inputs):
+        return inputs[1], self.chain.stages
+
+    def in_state(self, parts, state):
+        return parts[0].times(self.spreads[state])
+
+    def output_in_state(self, output, state):
+        return InState(float(state) if output == "regime" else self.spreads[state] ** 2)
 
     def ahead(self, steps, state, *inputs):
         chances = self.chain.chances(len(steps), state)
