@@ -94,7 +94,7 @@ class Counts(Term):
     def in_state(self, parts, state):
         if any(part.shocks for part in parts[:-1]):
             return None
-        law = self.law().distribution(self.mean * np.exp(parts[0].level) if len(parts) > 1 else None)
+        law = self.law().distribution(self.mean * exp(np.asarray(parts[0].level, float)) if len(parts) > 1 else None)
         return InState(0.0, {key: (1.0, source, law) for key, (_, source, _) in parts[-1].shocks.items()})
 
     def rank(self, values, cell, known, state, at):

@@ -200,6 +200,5 @@ def _functions(law: Any) -> tuple[Any, Any, Any]:
 
         return ndtr, lambda z: ndtr(-z), lambda z: -0.5 * z * z
     found = law.distribution() if hasattr(law, "distribution") else law
-    pdf = getattr(found, "pdf", None)
     sf = getattr(found, "sf", lambda z: 1.0 - found.cdf(z))
-    return found.cdf, sf, getattr(found, "logpdf", None) or (lambda z: np.log(pdf(z)))
+    return found.cdf, sf, getattr(found, "logpdf", None) or (lambda z: np.log(found.pdf(z)))

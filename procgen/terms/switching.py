@@ -83,7 +83,7 @@ class SwitchingNoise(Term):
         return parts[0].times(self.spreads[state])
 
     def output_in_state(self, output, state):
-        return InState(float(state) if output == "regime" else self.spreads[state] ** 2)
+        return InState(float(state) if output == "regime" else self.spreads[state] * self.spreads[state])
 
     def ahead(self, steps, state, *inputs):
         chances = self.chain.chances(len(steps), state)
