@@ -13,6 +13,7 @@ from typing import Any, NamedTuple
 import numpy as np
 
 from procgen.terms.base import Array, State
+from procgen.terms.instate import InState
 
 
 class Followed(NamedTuple):
@@ -54,6 +55,11 @@ def follow(chain: Any, values: Array, state: State | None) -> Followed:
     return Followed(chances, before, age, carried)
 
 
+def stages(chain: Any) -> tuple[Array, Array, tuple[int, ...]]:
+    """Chances of a chain's stages at step 0, their transitions, and the states that they belong to."""
+    return (chain.shares if chain.start is None else np.eye(len(chain.p))[chain.start]), chain.p, chain.owners
+
+
 def _first(chain: Any, x: Array) -> list[Array]:
     """Chances of the stages at step 0."""
     at = chain.shares if chain.start is None else np.eye(len(chain.p))[chain.start]
@@ -80,6 +86,12 @@ class Seen:
 
     def unranked(self) -> str:
         return ""
+
+    def chained(self, inputs: Sequence[Any]) -> Any:
+        return inputs[0], stages(self.chain)
+
+    def in_state(self, parts: Sequence[Any], state: int | None) -> Any:
+        return None if state is None else InState(float(state))
 
     def _followed(self, values: Array, state: State | None) -> Followed:
         """The events of a tile and its ranks are asked for one after the other."""

@@ -27,7 +27,6 @@ from procgen.spec.named import Named, Names, Rows
 from procgen.spec.tree import Tree
 from procgen.terms.base import Ahead, Array, Draw, Issue, State, Term, number
 from procgen.terms.followed import Seen
-from procgen.terms.instate import InState
 from procgen.terms.support import finite
 
 UNIFORM = LAWS["uniform"]()
@@ -260,11 +259,6 @@ class States:
         """What the axis asks of a chain: transitions, shares, start, names and owners."""
         return self.p, self.shares, self.start, self.names, self.owners
 
-    @property
-    def stages(self) -> tuple[Array, Array, tuple[int, ...]]:
-        """Chances of the stages at step 0, their transitions, and the states that they belong to."""
-        return (self._rest() if self.start is None else np.eye(len(self.p))[self.start]), self.p, self.owners
-
     def whole(self, stages: Any) -> list[Any]:
         """Numbers or rows, one a stage, added up by state."""
         return [added([x for x, i in zip(stages, self.owners, strict=True) if i == k]) for k in range(len(self.names))]
@@ -379,12 +373,6 @@ class Chain(Seen, Term):
 
     def recurse(self, inputs, state, at):
         return self.chain.go(inputs[0], state)
-
-    def chained(self, inputs):
-        return inputs[0], self.chain.stages
-
-    def in_state(self, parts, state):
-        return InState(float(state))
 
     def ahead(self, steps, state, *inputs):
         chances = self.chain.chances(len(steps), state)

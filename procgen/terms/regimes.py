@@ -13,7 +13,7 @@ from procgen.terms import markov
 from procgen.terms.base import Ahead, Draw, Term, Unknown
 from procgen.terms.combine import Hidden
 from procgen.terms.flag import Flag
-from procgen.terms.followed import Shown
+from procgen.terms.followed import Shown, stages
 from procgen.terms.instate import InState
 from procgen.terms.support import EVERYTHING, either, finite
 
@@ -122,7 +122,7 @@ class Regimes(Term):
         return Shown(self.chain) if output == "regime" and self.chain is not None else None
 
     def chained(self, inputs):
-        return None if self.chain is None else (inputs[-1], self.chain.stages)
+        return None if self.chain is None else (inputs[-1], stages(self.chain))
 
     def in_state(self, parts, state):
         if state is None:

@@ -10,7 +10,7 @@ from procgen.spec.declare import Parameter, Real
 from procgen.spec.named import Named
 from procgen.terms import markov
 from procgen.terms.base import LAW, Ahead, Draw, Term, number
-from procgen.terms.followed import Shown
+from procgen.terms.followed import Shown, stages
 from procgen.terms.instate import InState
 
 
@@ -77,7 +77,7 @@ class SwitchingNoise(Term):
         return Shown(self.chain) if output == "regime" else None
 
     def chained(self, inputs):
-        return inputs[1], self.chain.stages
+        return inputs[1], stages(self.chain)
 
     def in_state(self, parts, state):
         return parts[0].times(self.spreads[state])
