@@ -154,6 +154,11 @@ class Verdict:
         return coverage(self.rows, self.about)
 
     @property
+    def complete(self) -> bool:
+        """Whether of every series each side of its behaviour that can be asked for was judged."""
+        return bool(self.coverage) and not any(each.missing for each in self.coverage)
+
+    @property
     def title(self) -> str:
         part = self.about.get("judged_on")
         return title(self.verdict, self.coverage) + (f" ({part})" if part else "")
@@ -182,6 +187,13 @@ class Verdict:
             "verdict": self.verdict,
             "false_alarm": self.false_alarm,
             "checks": [row.row() for row in self.rows],
+            "title": self.title,
+            "complete": self.complete,
+            "causes": [{"cause": t.cause, "effects": list(t.effects), "alike": t.alike} for t in self.told],
+            "judged": [
+                {"series": c.series, "judged": list(c.judged), "not_judged": dict(c.missing), "still": c.still}
+                for c in self.coverage
+            ],
         }
 
     def to_json(self) -> str:
@@ -190,11 +202,13 @@ class Verdict:
 
         return json.dumps(self.to_dict(), ensure_ascii=False, allow_nan=False)
 
-    def to_text(self, rows: int = 8) -> str:
+    def text(self, rows: int = 8) -> str:
         """The verdict for a terminal, with the `rows` smallest p."""
         from procgen.report.text import verdict_text
 
         return verdict_text(self, rows)
+
+    to_text = text  # as it was called before
 
     def to_html(self, path: str | Path, overwrite: bool = False) -> Path:
         """Write the verdict, with pictures of what it saw, as one self-contained page; returns its path.
@@ -207,7 +221,7 @@ class Verdict:
         return write_verdict(self, Path(path), overwrite)
 
     def __str__(self) -> str:
-        return self.to_text()
+        return self.text()
 
     def __repr__(self) -> str:
         return f"Verdict({self.verdict}, {', '.join(f'{n} {what}' for what, n in self.counts.items())})"

@@ -98,7 +98,12 @@ def test_what_cannot_be_trusted_leaves_the_family():
 def test_json_has_the_published_shape():
     rows = [check(9.0), Check("y", "mean", "step 0", "level", theory=float("inf"), outcome="reported", note="a reason")]
     data = json.loads(Verdict(rows, 0.01).to_json())
-    assert list(data) == ["verdict", "false_alarm", "checks"]
+    assert list(data) == ["verdict", "false_alarm", "checks", "title", "complete", "causes", "judged"]
+    assert data["title"] == "DEPARTS from what the spec states" and data["complete"] is False
+    (cause,) = data["causes"]
+    assert cause["cause"].startswith("x: memory: ") and cause["effects"] == [] and cause["alike"] == ""
+    x = data["judged"][0]
+    assert x["series"] == "x" and x["judged"] == ["memory"] and "spread" in x["not_judged"] and x["still"] is False
     assert data["verdict"] == "departs"
     assert data["false_alarm"] == 0.01
     assert [tuple(row) for row in data["checks"]] == [COLUMNS, COLUMNS]
@@ -230,3 +235,21 @@ def test_reasons_that_differ_in_counts_alone_are_told_once():
     other = "only 40 paths of at least 100: reported, not judged"
     assert alike([*notes, other])[other] == other
     assert alike(["1,000 paths are few", "999 paths are few"])["999 paths are few"] == "999–1,000 paths are few"
+
+
+@pytest.mark.parametrize(("options", "code"), [([], 0), (["--in-full"], 2)])
+def test_a_pipeline_may_insist_that_all_was_judged(options, code, tmp_path):
+    """Of a garch of few steps, what came before step 0 cannot be forgotten: its clustering and law are not judged."""
+    from typer.testing import CliRunner
+
+    from procgen.cli import app
+
+    body = [{"garch": {"omega": 0.05, "alpha": 0.1, "beta": 0.85}}]
+    raw = {"procgen": 1, "seed": 3, "paths": 600, "time": {"steps": 60}, "series": {"x": body}}
+    (tmp_path / "spec.yaml").write_text(json.dumps(raw))
+    runner = CliRunner()
+    assert runner.invoke(app, ["render", str(tmp_path / "spec.yaml"), "-o", str(tmp_path / "out")]).exit_code == 0
+    found = runner.invoke(app, ["validate", str(tmp_path / "out"), "--json", *options])
+    data = json.loads(found.stdout)
+    assert found.exit_code == code and data["verdict"] == "agrees" and data["complete"] is False
+    assert "law" in data["judged"][0]["not_judged"] and data["title"].startswith("AGREES on ")
