@@ -13,7 +13,12 @@ from typing import Any, NoReturn
 
 import typer
 
+from procgen.ensemble.errors import few_words, lacks_memory
 from procgen.ensemble.own import claim
+from procgen.report.letters import (  # here, since a failure may leave no memory and no file to read it from
+    encoded,
+    tame,
+)
 
 BAD_INPUT, INTERRUPTED, BROKEN_PIPE = 2, 130, 141
 EACH = 0.1  # seconds between two sights of the bar
@@ -64,8 +69,6 @@ def run(app: typer.Typer) -> NoReturn:
 
 def printed(text: str, json: bool = False) -> None:
     """Write text to standard output, whatever letters the terminal can show; what it would obey is written as codes."""
-    from procgen.report.letters import encoded, tame
-
     stream = sys.stdout
     encoding = getattr(stream, "encoding", None) or "utf-8"
     stream.write(encoded(tame(text, json), encoding).decode(encoding))
@@ -119,13 +122,10 @@ def sentence(error: Exception) -> str:
     """What went wrong, for a person: our own errors say it themselves, others in one line."""
     if type(error).__module__.startswith("procgen."):
         return str(error)
-    from procgen.ensemble.errors import lacks_memory
-
     if lacks_memory(error):
         return "not enough memory; ask for fewer paths or steps at a time, or fewer workers"
     if isinstance(error, OSError):
-        where = f"{error.filename}: " if error.filename else ""
-        return f"{where}{error.strerror or error}"
+        return few_words(error)
     name = type(error).__name__
     return (
         f"a fault in procgen itself ({name}: {error}); please report it, with the spec and with what is printed "
@@ -135,6 +135,4 @@ def sentence(error: Exception) -> str:
 
 def said(text: str) -> None:
     """Write a line to standard error, beside what is printed; what a terminal would obey is written as codes."""
-    from procgen.report.letters import tame
-
     print(f"procgen: {tame(text)}", file=sys.stderr)

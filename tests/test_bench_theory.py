@@ -4,9 +4,6 @@ from __future__ import annotations
 
 import subprocess
 import sys
-from pathlib import Path
-
-BENCH = Path(__file__).parent / "bench" / "bench_theory.py"
 
 
 def test_theory_of_long_memories_takes_less_than_two_seconds_and_500_megabytes():
@@ -14,7 +11,9 @@ def test_theory_of_long_memories_takes_less_than_two_seconds_and_500_megabytes()
 
     The bench runs in a small process of its own: the peak that the system tells of a child counts its parent's too.
     """
-    told = subprocess.run([sys.executable, BENCH, "--quick"], capture_output=True, text=True, check=True).stdout
+    told = subprocess.run(
+        [sys.executable, "-m", "tests.bench.bench_theory", "--quick"], capture_output=True, text=True, check=True
+    ).stdout
     rows = {words[0]: words for words in map(str.split, told.splitlines()) if words and words[0] in ("text", "JSON")}
     assert len(rows) == 2
     for name, (*_, processor, peak) in rows.items():

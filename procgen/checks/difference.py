@@ -14,7 +14,7 @@ from procgen.checks.held import broken
 from procgen.checks.paired import Paired, Sums
 from procgen.ensemble.beside import First, common, note, side_by_side
 from procgen.ensemble.ensemble import Ensemble, open_ensemble
-from procgen.ensemble.errors import EnsembleError
+from procgen.ensemble.errors import EnsembleError, Refused
 from procgen.ensemble.manifest import Manifest
 from procgen.ensemble.places import Place, Remote, place_of
 from procgen.ensemble.plan import Block
@@ -221,6 +221,8 @@ def _seen(
     found: dict[str, First] = {}
     try:
         _compare(found, sums, a, b, block, steps, [*both, *_revealed(a, b)], progress)
+    except Refused:
+        raise
     except EnsembleError:
         damages = broken(sides, {}, progress)
         if not damages:
@@ -333,6 +335,8 @@ def _of_manifest(path: Place) -> Side:
     refuse_changed(manifest, path)
     try:
         found = open_ensemble(path.parent) if path.name == MANIFEST else None
+    except Refused:
+        raise
     except EnsembleError:
         found = None
     return Side(str(path), read_spec(manifest.raw) if found is None else found.spec, found)

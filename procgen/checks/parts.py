@@ -22,7 +22,7 @@ from procgen.checks.lane import Pass, repays
 from procgen.checks.rectangles import Blocks, Values, first_values, grouped, named
 from procgen.ensemble import digest
 from procgen.ensemble.ensemble import OnDisk, open_ensemble
-from procgen.ensemble.errors import EnsembleError
+from procgen.ensemble.errors import EnsembleError, Refused
 from procgen.ensemble.manifest import node
 from procgen.ensemble.places import address
 from procgen.ensemble.plan import Block
@@ -124,6 +124,8 @@ class _Chain:
             for number, part in self.parts.items():
                 yield from self._in_step(self._pieces(number, part.block, pieces), part.block)
             next(pieces, None)  # what comes after the last row is looked at, too
+        except Refused:
+            raise
         except EnsembleError as error:
             self.faults.append((str(part.block), str(error)))
 

@@ -12,7 +12,7 @@ from procgen.checks.foreign import TableError
 from procgen.checks.gather import Gather
 from procgen.checks.lane import in_one_process
 from procgen.checks.parts import WORK, is_whole, plan_for, tasks, unpacked
-from procgen.checks.rectangles import grouped, named
+from procgen.checks.rectangles import Blocks, grouped, named
 from procgen.checks.tree import Tree
 from procgen.checks.verdict import Check
 from procgen.ensemble.cluster import opened
@@ -33,6 +33,7 @@ class Origin(Protocol):
     same_draws: bool  # whether drawn parameters of a path are those that `spec` draws for it
 
     def gathered(self, workers: int | None, progress: Progress | None, scheduler: str | None = None) -> Gather: ...
+    def blocks(self) -> Blocks: ...
     def checks(self) -> list[Check]: ...
     def about(self) -> dict[str, Any]: ...
 
@@ -129,8 +130,12 @@ class EnsembleOrigin:
         no_cluster(scheduler)
         from procgen.checks.validate import plan_of
 
-        blocks = grouped(named(self.ensemble.blocks(), self.columns), self.ensemble.whole)
+        blocks = grouped(self.blocks(), self.ensemble.whole)
         return in_one_process(plan_of(self.spec, self.steps, self.same_draws), blocks, self.ensemble.whole, progress)
+
+    def blocks(self) -> Blocks:
+        """The values of the series of `spec`, in row order."""
+        return named(self.ensemble.blocks(), self.columns)
 
     def _from_parts(self, workers: int | None, progress: Progress | None, scheduler: str | None) -> Gather:
         tree: Tree[Gather] = Tree()

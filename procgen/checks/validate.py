@@ -13,7 +13,7 @@ from typing import Any
 
 import numpy as np
 
-from procgen.checks import farthest, missing, repeated
+from procgen.checks import farthest, missing, repeated, spans
 from procgen.checks.atoms import few_shocks, flattened, known_within, may_stay
 from procgen.checks.copies import repeats_of
 from procgen.checks.extremes import MARK, Reach
@@ -95,6 +95,7 @@ def validate(
     origin = source.origin(data, spec, columns)
     gather = origin.gathered(workers, progress, scheduler)
     rows = [*origin.checks(), *origin.faults, *judged(gather)]
+    rows += spans.checks(origin, gather, rows)
     absent = getattr(origin, "absent", 0)
     if absent:  # rows that are missing are named once, not again as values that are not finite
         rows = [row for row in rows if not _only_absent(row, gather, absent)]

@@ -13,7 +13,7 @@ from procgen.ensemble import digest, files, parquet
 from procgen.ensemble.columns import store
 from procgen.ensemble.draw import Drawer, empty
 from procgen.ensemble.ensemble import Blocks, Ensemble, OnDisk, nothing_at
-from procgen.ensemble.errors import MEND, EnsembleError
+from procgen.ensemble.errors import MEND, EnsembleError, Refused
 from procgen.ensemble.expected import departure
 from procgen.ensemble.expected import expected as read_expected
 from procgen.ensemble.manifest import Manifest, PartRecord, node
@@ -209,6 +209,8 @@ class Reader:
                 nodes = self._nodes(part)
                 damages += self._compare(part, nodes)
                 found.append((part.block, nodes))
+            except Refused:
+                raise
             except EnsembleError as error:
                 damages += [Damage(part.file, str(error)), *self._identity(part)]
             rows += part.block.rows
@@ -250,6 +252,8 @@ class Reader:
         for name in dict.fromkeys([*self.manifest.layout.files(part.file, self.columns), part.file]):
             try:
                 said = parquet.footer(self.path / name)[0]
+            except Refused:
+                raise
             except EnsembleError:  # not there, or written again by another program with the same values
                 continue
             found = other_than_part(self.manifest.identity, said)
@@ -264,6 +268,8 @@ class Reader:
             found = files.footers(Folder(self.path), part.file, self.manifest.layout, self.columns)
             stored = files.together([nodes for _, _, nodes in found])["stored"]
             return stored if node(stored) == part.node else {}
+        except Refused:
+            raise
         except (EnsembleError, KeyError, TypeError, AttributeError):
             return {}
 
@@ -311,6 +317,8 @@ class Reader:
                 found = self._first(block, values, rows, kept)
                 if found is not None:
                     return found
+        except Refused:
+            raise
         except EnsembleError:
             pass  # unreadable from here on; `examine` has said so
         return None

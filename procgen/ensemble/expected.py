@@ -13,7 +13,7 @@ from typing import Any
 
 from procgen.ensemble.beside import First, Redrawn, Tick, common, earliest, firsts
 from procgen.ensemble.ensemble import Ensemble, open_ensemble
-from procgen.ensemble.errors import EnsembleError
+from procgen.ensemble.errors import EnsembleError, Refused
 from procgen.ensemble.manifest import Manifest
 from procgen.ensemble.places import Place, place_of
 from procgen.ensemble.seal import refuse_changed, refuse_version
@@ -41,6 +41,8 @@ class Expected:
             found = open_ensemble(self.file.parent)
             if self.file.name == MANIFEST and found.digest == self.digest:
                 return found
+        except Refused:
+            raise
         except EnsembleError:
             pass
         return Redrawn(read_spec(self.manifest.raw), self.manifest.whole)

@@ -19,7 +19,7 @@ import numpy as np
 
 from procgen.ensemble.again import Again
 from procgen.ensemble.columns import Column
-from procgen.ensemble.errors import EnsembleError
+from procgen.ensemble.errors import EnsembleError, refuse_unread
 from procgen.ensemble.forms import Form, Unit, form
 from procgen.ensemble.layouts import Layout
 from procgen.ensemble.places import Place, readable
@@ -111,6 +111,7 @@ def footer(path: Place) -> tuple[dict[str, Any], dict[str, Any], pq.FileMetaData
         texts = found.metadata or {}
         return json.loads(texts[IDENTITY]), json.loads(texts[NODES]), found
     except (OSError, pa.ArrowException, ValueError, RecursionError) as error:
+        refuse_unread(error, path)
         raise EnsembleError(f"{path} cannot be read as Parquet: {_first_line(error)}") from None
     except KeyError:
         raise EnsembleError(f"{path} was not written by procgen render, or was changed since") from None
@@ -123,7 +124,8 @@ def is_parquet(path: Place) -> bool:
 
     try:
         pq.read_metadata(readable(path))
-    except (OSError, pa.ArrowException, ValueError):
+    except (OSError, pa.ArrowException, ValueError) as error:
+        refuse_unread(error, path)
         return False
     return True
 
@@ -249,11 +251,13 @@ def _opened(path: Place, rows: Form) -> Iterator[pq.ParquetFile]:
     except Bomb as error:
         raise EnsembleError(f"{error}, or draw it again with --resume (resume=True)") from None
     except MemoryError as error:
+        refuse_unread(error, path)
         raise EnsembleError(
             f"{path} cannot be read in the memory there is ({_first_line(error) or 'none is left'}); give it more, or, "
             "if it is damaged, draw it again with --resume (resume=True)"
         ) from None
     except (OSError, UnicodeDecodeError, pa.ArrowException) as error:
+        refuse_unread(error, path)
         raise EnsembleError(
             f"{path} is damaged: {_first_line(error)}; draw it again with --resume (resume=True)"
         ) from None

@@ -11,7 +11,7 @@ from typing import Any
 from procgen.ensemble import files, parquet, revealed
 from procgen.ensemble.check import Reader, Tick
 from procgen.ensemble.columns import Column
-from procgen.ensemble.errors import Damaged, EnsembleError
+from procgen.ensemble.errors import Damaged, EnsembleError, Refused
 from procgen.ensemble.layouts import Layout
 from procgen.ensemble.manifest import Manifest, covers
 from procgen.ensemble.plan import Block, Chain
@@ -127,6 +127,8 @@ class Present:
         """What a file says of itself; None when it is ours and damaged, so that it is drawn again."""
         try:
             identity, nodes, _ = parquet.footer(self.folder.path / file)
+        except Refused:
+            raise
         except EnsembleError as error:
             if file in listed:
                 return None
@@ -186,6 +188,8 @@ class Present:
     def _is_ours(self, name: str) -> bool:
         try:
             parquet.footer(self.folder.path / name)
+        except Refused:
+            raise
         except EnsembleError:
             return False
         return True

@@ -161,18 +161,21 @@ class Folder:
 
     def part_files(self) -> list[str]:
         """Names in OUT that have the form of a part's name."""
-        try:
-            return sorted(entry.name for entry in self.path.iterdir() if PART.fullmatch(entry.name))
-        except FileNotFoundError:
-            return []
+        return sorted(entry.name for entry in self._entries() if PART.fullmatch(entry.name))
 
     def tables(self) -> list[str]:
         """Names of the files in OUT that readers of a whole folder take for Parquet, whoever wrote them."""
+        found = [entry for entry in self._entries() if entry.suffix.lower() in TABLES and entry.is_file()]
+        return sorted(entry.name for entry in found)
+
+    def _entries(self) -> list[Any]:
+        """What OUT holds, nothing when it is not there."""
         try:
-            found = [entry for entry in self.path.iterdir() if entry.suffix.lower() in TABLES and entry.is_file()]
+            return [*self.path.iterdir()]
         except FileNotFoundError:
             return []
-        return sorted(entry.name for entry in found)
+        except OSError as error:
+            raise EnsembleError(system_sentence(error, f"looking through {self.path}")) from None
 
     def remove(self, names: list[str]) -> None:
         """Remove files of OUT, the manifest first, so that nothing that is left looks whole."""
@@ -184,13 +187,13 @@ class Folder:
 
     def clean_state(self, keep_plan: bool) -> None:
         """Remove what earlier renders left in .state: all but the lock and, when asked, plan and states."""
-        for entry in self.state.iterdir():
-            ours = entry.suffix == ".tmp" or (entry.suffix in (".json", ".npz") and not keep_plan)
-            if ours:
-                try:
+        entry = self.state
+        try:
+            for entry in self.state.iterdir():
+                if entry.suffix == ".tmp" or (entry.suffix in (".json", ".npz") and not keep_plan):
                     entry.unlink(missing_ok=True)
-                except OSError as error:
-                    raise EnsembleError(system_sentence(error, f"removing {entry}")) from None
+        except OSError as error:
+            raise EnsembleError(system_sentence(error, f"removing {entry}")) from None
 
     @contextlib.contextmanager
     def locked(self, patience: float = PATIENCE) -> Iterator[int | None]:
@@ -227,8 +230,8 @@ class Folder:
             failed = False
         finally:
             ours = self.begun or not others
-            empty = failed and ours and not self.part_files() and self.size(MANIFEST) < 0
             with contextlib.suppress(OSError, EnsembleError):
+                empty = failed and ours and not self.part_files() and self.size(MANIFEST) < 0
                 if empty:
                     self.clean_state(keep_plan=False)
                 if not (self.path / PLAN).exists():
@@ -250,9 +253,7 @@ class Folder:
             if _try_lock(descriptor):
                 # the previous holder may have removed the file while this process waited for it
                 if _same_file(descriptor, path):
-                    os.ftruncate(descriptor, 0)
-                    os.pwrite(descriptor, str(os.getpid()).encode(), 0)
-                    return descriptor
+                    return _signed(descriptor)
             elif time.monotonic() > give_up:
                 holder = os.pread(descriptor, 20, 0).decode("ascii", "replace")
                 os.close(descriptor)
@@ -279,6 +280,17 @@ def _try_lock(descriptor: int) -> bool:
     except BlockingIOError:
         return False
     return True
+
+
+def _signed(descriptor: int) -> int:
+    """A lock that says whose it is; let go where it cannot."""
+    try:
+        os.ftruncate(descriptor, 0)
+        os.pwrite(descriptor, str(os.getpid()).encode(), 0)
+    except OSError:
+        os.close(descriptor)
+        raise
+    return descriptor
 
 
 def _same_file(descriptor: int, path: Path) -> bool:

@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 
 from procgen.theory.expression import Expression
 from procgen.theory.laws import Affine, is_gaussian, jointly_gaussian, marginal
-from procgen.theory.lumps import Bounded, Lumped, Point, atoms_of, chance_of, moments, on_atoms
+from procgen.theory.lumps import Bounded, Lumped, Measured, Point, atoms_of, chance_of, on_atoms
 from procgen.theory.unknown import Unknown
 
 KNOWN = "the value at that step is known, not random"
@@ -84,7 +84,7 @@ def _law_or_value(x: Expression, step: int) -> Any:
     return marginal(x, step)
 
 
-class _Maximum:
+class _Maximum(Measured):
     """What laws of a maximum share: quantiles by halving between those of the parts, moments from areas."""
 
     spacing = 0.0
@@ -115,19 +115,6 @@ class _Maximum:
 
         low, high = self._ends(p)
         return on_atoms(self, p, halved(beyond, low, high))
-
-    def mean(self) -> float:
-        return self._moments[0]
-
-    def var(self) -> float:
-        return self._moments[1]
-
-    def std(self) -> float:
-        return float(np.sqrt(self.var()))
-
-    @cached_property
-    def _moments(self) -> tuple[float, float]:
-        return moments(self)
 
 
 class Larger(_Maximum):

@@ -140,7 +140,24 @@ class Lumped(MixedLaw):
         return on_atoms(self, p, super().ppf(p))
 
 
-class Bounded:
+class Measured:
+    """What laws share whose moments come from their own areas, by quadrature."""
+
+    def mean(self) -> float:
+        return self._moments[0]
+
+    def var(self) -> float:
+        return self._moments[1]
+
+    def std(self) -> float:
+        return float(np.sqrt(self.var()))
+
+    @cached_property
+    def _moments(self) -> tuple[float, float]:
+        return moments(self)
+
+
+class Bounded(Measured):
     """A law of which all that is beyond `low` or `high` is put on it (Tobin 1958)."""
 
     def __init__(self, law: Any, low: float = -np.inf, high: float = np.inf):
@@ -191,21 +208,8 @@ class Bounded:
     def isf(self, p: Any) -> NDArray:
         return np.clip(self.law.isf(p), self.low, self.high)
 
-    def mean(self) -> float:
-        return self._moments[0]
 
-    def var(self) -> float:
-        return self._moments[1]
-
-    def std(self) -> float:
-        return float(np.sqrt(self.var()))
-
-    @cached_property
-    def _moments(self) -> tuple[float, float]:
-        return moments(self)
-
-
-class Folded:
+class Folded(Measured):
     """The law of |X| for an X that has a density, and maybe atoms (Leone, Nelson & Nottingham 1961)."""
 
     spacing = 0.0
@@ -246,17 +250,11 @@ class Folded:
         ends = np.abs([self.law.ppf((1.0 - p) / 2.0), self.law.isf((1.0 - p) / 2.0)])
         return on_atoms(self, p, halved(lambda x: beyond(x, p), np.zeros(p.shape), ends.max(axis=0)))
 
-    def mean(self) -> float:
-        return moments(self)[0]
-
     def var(self) -> float:
         return float(self.law.var()) + float(self.law.mean()) ** 2 - self.mean() ** 2
 
-    def std(self) -> float:
-        return float(np.sqrt(self.var()))
 
-
-class Mapped:
+class Mapped(Measured):
     """The law of f(X) for an f that rises; `back` undoes it, `rise` is the derivative of `back`."""
 
     spacing = 0.0
@@ -297,15 +295,6 @@ class Mapped:
 
     def isf(self, p: Any) -> NDArray:
         return self.f(np.asarray(self.law.isf(p), float))
-
-    def mean(self) -> float:
-        return moments(self)[0]
-
-    def var(self) -> float:
-        return moments(self)[1]
-
-    def std(self) -> float:
-        return float(np.sqrt(self.var()))
 
 
 def powered(law: Any, n: int) -> Mapped:

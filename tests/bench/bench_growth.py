@@ -23,8 +23,7 @@ from math import log2, log10
 from pathlib import Path
 from typing import NamedTuple
 
-from tests.bench.bench_validate import measure
-from tests.bench.bench_walk import Run
+from tests.bench.whole import PROCGEN, Run, run
 
 COMMANDS = ("render", "validate")
 TOLD = 1.1  # times the start: below, what a case costs above it is not told apart from chance
@@ -98,7 +97,7 @@ def both(case: Case, folder: Path) -> Iterator[tuple[tuple[Case, str], Run]]:
     shutil.rmtree(out, ignore_errors=True)
     try:
         for command, words in (("render", [str(file), "-o", str(out)]), ("validate", [str(out)])):
-            yield (case, command), measure([command, *words, "--workers", str(case.workers)])
+            yield (case, command), run([*PROCGEN, command, *words, "--workers", str(case.workers)])
     finally:
         shutil.rmtree(out, ignore_errors=True)
 

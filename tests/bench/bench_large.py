@@ -15,7 +15,7 @@ import platform
 import shutil
 from pathlib import Path
 
-from tests.bench.bench_validate import measure
+from tests.bench.whole import PROCGEN, run
 
 HEAD = "procgen: 1\nseed: 1\npaths: {paths}\ntime: {{steps: {steps}}}\nseries:\n"
 CASES = {
@@ -55,12 +55,12 @@ def report(name: str, paths: int, steps: int, spec: str, args: argparse.Namespac
     workers = ["--workers", str(args.workers)]
     try:
         for command in (["render", str(file), "-o", str(out)], ["validate", str(out)]):
-            run = measure([*command, *workers])
+            found = run([*PROCGEN, *command, *workers])
             size = sum(part.stat().st_size for part in out.glob("*.parquet")) / 1e6
-            rate = paths * steps / run.seconds / 1e6
+            rate = paths * steps / found.seconds / 1e6
             print(
-                f"| {name} | {paths:,} × {steps:,} | {size:,.0f} | {command[0]} | {run.seconds:.1f} | {rate:.1f} "
-                f"| {run.processor:.1f} | {run.peak:.0f} |",
+                f"| {name} | {paths:,} × {steps:,} | {size:,.0f} | {command[0]} | {found.seconds:.1f} | {rate:.1f} "
+                f"| {found.processor:.1f} | {found.peak:.0f} |",
                 flush=True,
             )
     finally:

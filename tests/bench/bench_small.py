@@ -9,13 +9,12 @@ The first run of each, which compiles Python's modules, is not counted. Below it
 from __future__ import annotations
 
 import argparse
-import os
 import subprocess
 import sys
 import tempfile
 from pathlib import Path
 
-from tests.bench.bench_walk import measure
+from tests.bench.whole import PROCGEN, into
 
 SPEC = """\
 procgen: 1
@@ -30,7 +29,6 @@ GOALS = {"render, 100 × 500": 1.0, "theory": 0.8, "-h": 0.3}
 
 def main() -> None:
     args = arguments()
-    os.environ.pop("PYTHONDONTWRITEBYTECODE", None)
     with tempfile.TemporaryDirectory() as folder:
         spec, out = Path(folder) / "spec.yaml", Path(folder) / "out"
         spec.write_text(SPEC)
@@ -41,8 +39,8 @@ def main() -> None:
         }
         print("| command | seconds | processor s | goal | peak MB |\n| --- | --- | --- | --- | --- |")
         for name, words in commands.items():
-            measure(["-m", "procgen", *words], out)
-            runs = [measure(["-m", "procgen", *words], out) for _ in range(args.rounds)]
+            into([*PROCGEN, *words], out)
+            runs = [into([*PROCGEN, *words], out) for _ in range(args.rounds)]
             seconds, processor = min(run.seconds for run in runs), min(run.processor for run in runs)
             peak = max(run.peak for run in runs)
             print(f"| {name} | {seconds:.2f} | {processor:.2f} | {GOALS[name]} | {peak:.0f} |", flush=True)

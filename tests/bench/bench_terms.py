@@ -1,6 +1,6 @@
 """Time of every term against white noise of the same size, in memory, 16,384 paths × 1,000 steps.
 
-    python tests/bench/bench_terms.py [--quick] [--rounds 3] [--only KIND ...] [--laws]
+    python -m tests.bench.bench_terms [--quick] [--rounds 3] [--only KIND ...] [--laws]
 
 Each term is drawn as its own example (`procgen terms KIND`), whatever that holds: a body below it is drawn too, and
 `draws` says how many numbers of chance a value takes. Where one value is made of k finer steps of a body (`aggregate`,

@@ -1,6 +1,6 @@
 """Time and memory of `procgen theory` on five series of 100,000 steps with memories of a week of hours.
 
-    python tests/bench/bench_theory.py [--quick] [--rounds 5]
+    python -m tests.bench.bench_theory [--quick] [--rounds 5]
 
 Every case is a whole process, from its start to its last line; one before them leaves the bytecode that an installed
 package has. Seconds are those of the clock, processor seconds those
@@ -17,12 +17,10 @@ import argparse
 import os
 import platform
 import statistics
-import subprocess
-import sys
 import tempfile
-import time
 from pathlib import Path
-from typing import NamedTuple
+
+from tests.bench.whole import PROCGEN, Run, run
 
 SEASON = 24 * 7
 SPEC = """\
@@ -42,14 +40,6 @@ series:
     - seasonal: {{period: {s}, harmonics: [{{amplitude: 2}}]}}
   price: [{{exp: [{{random_walk: {{sd: 0.01}}}}]}}]
 """
-
-
-class Run(NamedTuple):
-    """One process."""
-
-    seconds: float
-    processor: float
-    peak: float  # MB
 
 
 def main() -> None:
@@ -75,12 +65,11 @@ def measured(rounds: int) -> dict[str, list[Run]]:
     with tempfile.TemporaryDirectory() as folder:
         spec = Path(folder) / "long.yaml"
         spec.write_text(SPEC.format(s=SEASON, phi=coefficients()))
-        command = [sys.executable, "-m", "procgen", "theory", str(spec)]
-        environment = {name: value for name, value in os.environ.items() if name != "PYTHONDONTWRITEBYTECODE"}
-        run(command, environment)
+        command = [*PROCGEN, "theory", str(spec)]
+        run(command)
         for _ in range(rounds):
             for name, options in cases.items():
-                seen[name].append(run([*command, *options], environment))
+                seen[name].append(run([*command, *options]))
     return seen
 
 
@@ -92,18 +81,6 @@ def coefficients() -> list[float]:
     for r in partials:  # Durbin (1960)
         phi = [c - r * d for c, d in zip(phi, phi[::-1], strict=True)] + [r]
     return [round(c, 6) for c in phi]
-
-
-def run(command: list[str], environment: dict[str, str]) -> Run:
-    began = time.perf_counter()
-    process = subprocess.Popen(command, stdout=subprocess.DEVNULL, env=environment)
-    _, status, usage = os.wait4(process.pid, 0)
-    took = time.perf_counter() - began
-    process.returncode = os.waitstatus_to_exitcode(status)
-    if process.returncode:
-        raise SystemExit(f"{' '.join(command)} ended with exit code {process.returncode}")
-    unit = 1 if platform.system() == "Darwin" else 1024
-    return Run(took, usage.ru_utime + usage.ru_stime, usage.ru_maxrss * unit / 1e6)
 
 
 if __name__ == "__main__":

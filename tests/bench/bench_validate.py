@@ -12,17 +12,21 @@ from __future__ import annotations
 
 import argparse
 import os
-import platform
 import shutil
 import statistics
-import subprocess
-import sys
-import time
 from itertools import pairwise
 from pathlib import Path
 
-from tests.bench.bench_walk import SPEC, Run, ratio
+from tests.bench.whole import PROCGEN, Run, ratio, run
 
+SPEC = """\
+procgen: 1
+seed: 1
+paths: {paths}
+time: {{steps: {steps}}}
+series:
+  x: [{{{term}}}]
+"""
 TERMS = {
     "noise": "white_noise: {sd: 1}",
     "walk": "random_walk: {sd: 1}",
@@ -50,8 +54,8 @@ def main() -> None:
             file.write_text(cases[name])
             shutil.rmtree(out, ignore_errors=True)
             workers = ["--workers", str(args.workers)]
-            renders.append(measure(["render", str(file), "-o", str(out), *workers]))
-            validations.append(measure(["validate", str(out), *workers]))
+            renders.append(run([*PROCGEN, "render", str(file), "-o", str(out), *workers]))
+            validations.append(run([*PROCGEN, "validate", str(out), *workers]))
             shutil.rmtree(out)
     report(seen, paths, steps, args.workers)
 
@@ -80,20 +84,6 @@ def specs(paths: int, steps: int, longest: int) -> dict[str, str]:
     one = SPEC.format(paths=1, steps=longest, term=TERMS["ar2"])
     found["long"] = one.replace("x: [{", "x: {type: float32, of: [{").replace("}]\n", "}]}\n")
     return found
-
-
-def measure(arguments: list[str]) -> Run:
-    """Run one command of procgen."""
-    began = time.perf_counter()
-    kept = {**os.environ, "PYTHONDONTWRITEBYTECODE": ""}  # modules are compiled once, as those of an installation are
-    process = subprocess.Popen([sys.executable, "-m", "procgen", *arguments], stdout=subprocess.DEVNULL, env=kept)
-    _, status, usage = os.wait4(process.pid, 0)
-    took = time.perf_counter() - began
-    process.returncode = os.waitstatus_to_exitcode(status)
-    if process.returncode:
-        raise SystemExit(f"{' '.join(arguments)} ended with exit code {process.returncode}")
-    unit = 1 if platform.system() == "Darwin" else 1024
-    return Run(took, usage.ru_utime + usage.ru_stime, usage.ru_maxrss * unit / 1e6)
 
 
 def report(seen: dict[str, tuple[list[Run], list[Run]]], paths: int, steps: int, workers: int) -> None:

@@ -3,6 +3,7 @@
 Kills, full disks, read-only disks, locks and missing parts are in `test_store.py`; the two studies are here in small.
 """
 
+import errno
 import json
 import os
 import shutil
@@ -19,6 +20,7 @@ from tests.studies import damage, faults
 
 linux = pytest.mark.skipif(not sys.platform.startswith("linux"), reason="reads /proc, sets limits as Linux has them")
 SMALL = {"procgen": 1, "seed": 3, "paths": 40, "time": {"steps": 50}, "series": {"x": {"ar": {"phi": 0.7, "sd": 1}}}}
+LIMIT = "import resource; resource.setrlimit(resource.RLIMIT_NOFILE, ({files}, {files}))"
 RESUME = "then go on with --resume"
 
 
@@ -163,14 +165,87 @@ part._render_part = once
 
 
 @linux
-@pytest.mark.parametrize("files,workers", [(5, 1), (7, 2)])
+@pytest.mark.parametrize("files,workers", [(4, 1), (5, 1), (4, 2), (7, 2)])
 def test_too_few_open_files(tmp_path, files, workers):
     spec = written(tmp_path, faults.SPEC)
-    limit = f"import resource; resource.setrlimit(resource.RLIMIT_NOFILE, ({files}, {files}))"
-    code, said = command(limit, "render", spec, "-o", tmp_path / "out", "--workers", workers)
+    code, said = command(LIMIT.format(files=files), "render", spec, "-o", tmp_path / "out", "--workers", workers)
     assert code == 2 and said.startswith("procgen: too many open files while "), said
     assert "raise the limit (ulimit -n)" in said and RESUME in said
     assert command("", "render", spec, "-o", tmp_path / "out", "--resume")[0] == 0
+    faults.in_order(tmp_path / "out", pg.render(faults.SPEC).digest)
+
+
+@linux
+@pytest.mark.parametrize("asked", ["digest", "validate", "difference", "export", "picture"])
+def test_too_few_open_files_to_read_are_no_damage(tmp_path, asked):
+    """They were called damaged parts, and an ensemble in order departing, with the exit code of that."""
+    out, file = tmp_path / "out", str(tmp_path / "file.csv")
+    pg.render(SMALL, out)
+    more = {"difference": [out], "export": ["-o", file], "picture": ["-o", file.replace("csv", "svg")]}
+    code, said = command(LIMIT.format(files=4), asked, out, *more.get(asked, []))
+    assert code == 2 and said.startswith("procgen: too many open files while reading "), said
+    assert "raise the limit (ulimit -n)" in said and "damaged" not in said and said.count("\n") == 1
+    assert [place.name for place in tmp_path.iterdir()] == ["out"]
+    assert command("", "digest", out)[0] == 0
+
+
+def test_a_part_that_may_not_be_read_is_no_damage(tmp_path, bound):
+    made = pg.render(SMALL, tmp_path / "out")
+    part = tmp_path / "out" / made.manifest.parts[0].file
+    part.chmod(0)
+    for asked in (["digest"], ["digest", "--redraw"], ["validate"]):
+        code, said = command("", asked[0], tmp_path / "out", *asked[1:], before=bound)
+        assert code == 2 and said.startswith("procgen: no permission for reading "), said
+        assert part.name in said and "mend the permissions" in said
+    part.chmod(0o644)
+    assert check_digest(tmp_path / "out").digest == made.digest
+
+
+@pytest.mark.parametrize("short", [True, False])
+def test_memory_that_is_short_is_no_damage_and_an_absurd_size_is(tmp_path, monkeypatch, short):
+    pg.render(SMALL, tmp_path / "out")
+
+    def lacking(*given, **more):
+        raise MemoryError("malloc of size 1152921504606846976 failed")
+
+    monkeypatch.setattr("procgen.ensemble.parquet._expect_schema", lacking)
+    monkeypatch.setattr("procgen.ensemble.errors._TRIAL", 1 << 62 if short else 1 << 16)
+    if short:
+        with pytest.raises(EnsembleError, match="not enough memory for reading "):
+            check_digest(tmp_path / "out")
+    else:
+        assert "cannot be read in the memory there is" in check_digest(tmp_path / "out").text()
+
+
+def test_a_lock_that_cannot_be_signed_is_let_go(tmp_path, monkeypatch):
+    """In a process that lives on, such as a notebook, it kept everybody out."""
+
+    def full(*given):
+        raise OSError(errno.ENOSPC, "No space left on device")
+
+    with monkeypatch.context() as change:
+        change.setattr("procgen.ensemble.store.os.pwrite", full)
+        with pytest.raises(EnsembleError, match="no space left while making "):
+            pg.render(SMALL, tmp_path / "out")
+    assert pg.render(SMALL, tmp_path / "out").digest == pg.render(SMALL).digest
+
+
+@pytest.mark.parametrize("failing", ["os.fork", "subprocess.Popen"])
+def test_too_many_processes(tmp_path, failing):
+    spec = written(tmp_path, faults.SPEC)
+    place, _, name = failing.rpartition(".")
+    refuse = f"""
+import errno, os, subprocess
+from procgen.ensemble import forked, plan
+plan.PART_BYTES = {faults.PART_BYTES}
+def refuse(*given, **more):
+    raise BlockingIOError(errno.EAGAIN, "Resource temporarily unavailable")
+{place}.{name} = refuse
+forked.possible = lambda: {failing == "os.fork"}
+"""
+    code, said = command(refuse, "render", spec, "-o", tmp_path / "out", "--workers", 2)
+    assert code == 2 and "too many processes (ulimit -u); use fewer workers" in said and RESUME in said, said
+    assert command("", "render", spec, "-o", tmp_path / "out", "--resume", "--workers", 1)[0] == 0
     faults.in_order(tmp_path / "out", pg.render(faults.SPEC).digest)
 
 

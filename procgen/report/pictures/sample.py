@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.checks.words import many
+from procgen.ensemble.errors import Refused
 
 LIMIT = 1 << 24  # values of all series together that are held: 134 MB
 DRAWN_LIMIT = 1 << 21  # the same for paths that are drawn for a picture only
@@ -179,6 +180,8 @@ def _filled(
                 row += size
             if (filled == steps).all():
                 break
+    except Refused:
+        raise
     except ValueError as error:  # a part is damaged; the verdict says so too
         note = f"the rest cannot be read: {error}"
         kept = filled > 0 if filled.any() else np.arange(count) == 0
