@@ -240,7 +240,7 @@ def validate(
     with progress("reading") as tick:
         verdict = pg.validate(data, stated, false_alarm, columns or None, tick, workers, scheduler)
     written = None if report is None else f"report: {verdict.to_html(report, overwrite)}"
-    printed(verdict_json(verdict) if json else verdict.to_text(), json)
+    printed(verdict_json(verdict) if json else verdict.text(), json)
     if written:
         said(written) if json else printed(f"\n{written}")
     raise typer.Exit({True: 0, False: 1, None: 2}[verdict.agrees])
