@@ -39,7 +39,7 @@ class Lifted:
 
     def _of_season(self, row: Check, off: float) -> bool:
         """Whether the mean by phase makes a third of a product of shocks; of their variance, for all else of them."""
-        if not (self._season and row.what.startswith("shocks: ")):
+        if not self._season or not row.what.startswith("shocks: "):
             return False
         if row.what in _PRODUCTS:
             return _THIRD * off <= self._season

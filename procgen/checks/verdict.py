@@ -182,18 +182,17 @@ class Verdict:
         return [each.line for each in self.told]
 
     def to_dict(self) -> dict[str, Any]:
-        """The verdict as plain data, in the shape of `validate --json`."""
+        """The verdict as plain data, in the shape of `validate --json`.
+
+        `judged` has a record for each series and pair: `all` tells whether every side of it was judged.
+        """
         return {
             "verdict": self.verdict,
+            "title": self.title,
+            "headline": self.headline,
+            "judged": [each.to_dict() for each in self.coverage],
             "false_alarm": self.false_alarm,
             "checks": [row.row() for row in self.rows],
-            "title": self.title,
-            "complete": self.complete,
-            "causes": [{"cause": t.cause, "effects": list(t.effects), "alike": t.alike} for t in self.told],
-            "judged": [
-                {"series": c.series, "judged": list(c.judged), "not_judged": dict(c.missing), "still": c.still}
-                for c in self.coverage
-            ],
         }
 
     def to_json(self) -> str:
@@ -207,8 +206,6 @@ class Verdict:
         from procgen.report.text import verdict_text
 
         return verdict_text(self, rows)
-
-    to_text = text  # as it was called before
 
     def to_html(self, path: str | Path, overwrite: bool = False) -> Path:
         """Write the verdict, with pictures of what it saw, as one self-contained page; returns its path.
