@@ -52,6 +52,7 @@ def run(app: typer.Typer) -> NoReturn:
     Being asked to end is taken as Ctrl-C is, so that a render stops between two parts.
     """
     claim()
+    _open_streams()
     for library in ("OPENBLAS", "OMP", "MKL"):
         os.environ.setdefault(f"{library}_NUM_THREADS", "1")
     os.environ.setdefault("JE_ARROW_MALLOC_CONF", "background_thread:false")
@@ -65,6 +66,13 @@ def run(app: typer.Typer) -> NoReturn:
         said(sentence(error))
         sys.exit(BAD_INPUT)
     sys.exit(0)
+
+
+def _open_streams() -> None:
+    """Have something behind each standard stream that was closed: files opened later would take its number."""
+    for name, mode in (("stdin", "r"), ("stdout", "w"), ("stderr", "w")):
+        if getattr(sys, name) is None:
+            setattr(sys, name, open(os.devnull, mode, encoding="utf-8"))
 
 
 def printed(text: str, json: bool = False) -> None:

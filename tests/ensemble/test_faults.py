@@ -121,6 +121,18 @@ for out in ({str(out)!r}, {str(out / "below")!r}):
         assert f"mend the permissions, {RESUME} (resume=True), or choose another OUT" in line
 
 
+@pytest.mark.skipif(os.name != "posix", reason="closes streams as POSIX shells do")
+@pytest.mark.parametrize("closed", ["<&-", ">&-", "2>&-", "<&- >&- 2>&-"])
+def test_streams_that_are_closed_are_not_missed(tmp_path, closed):
+    """Commands in cron and daemons have such; without one, procgen spoke of a fault of its own."""
+    spec, out = written(tmp_path, faults.SPEC | {"paths": 2}), tmp_path / "out"
+    for arguments in (["render", spec, "-o", out, "--workers", "2"], ["digest", out], ["validate", out]):
+        call = ["sh", "-c", f'exec "$@" {closed}', "sh", sys.executable, "-m", "procgen", *map(str, arguments)]
+        done = subprocess.run(call, cwd=faults.ROOT, capture_output=True, text=True, timeout=120)
+        assert (done.returncode, done.stderr) == (0, "")
+    assert check_digest(out).digest == pg.render(faults.SPEC, paths=2).digest
+
+
 def test_a_manifest_of_another_spec_is_told(tmp_path):
     other = {**SMALL, "series": {"x": {"ar": {"phi": 0.6, "sd": 1}}}}
     made = pg.render(SMALL, tmp_path / "out")
