@@ -218,6 +218,9 @@ def validate(
     ] = None,
     scheduler: Scheduler = None,
     json: Json = False,
+    in_full: Annotated[
+        bool, typer.Option("--in-full", help="Agreement in part is not enough: end with 2 where a side was not judged.")
+    ] = False,
     report: Annotated[Path | None, typer.Option(metavar="FILE.html", help="Also write an HTML report.")] = None,
     overwrite: Overwrite = False,
 ) -> None:
@@ -240,10 +243,11 @@ def validate(
     with progress("reading") as tick:
         verdict = pg.validate(data, stated, false_alarm, columns or None, tick, workers, scheduler)
     written = None if report is None else f"report: {verdict.to_html(report, overwrite)}"
-    printed(verdict_json(verdict) if json else verdict.to_text(), json)
+    printed(verdict_json(verdict) if json else verdict.text(), json)
     if written:
         said(written) if json else printed(f"\n{written}")
-    raise typer.Exit({True: 0, False: 1, None: 2}[verdict.agrees])
+    lacking = in_full and verdict.agrees is True and not verdict.complete
+    raise typer.Exit(2 if lacking else {True: 0, False: 1, None: 2}[verdict.agrees])
 
 
 @app.command(

@@ -22,7 +22,7 @@ def test_a_copy_changed_in_place_is_refused_and_the_place_is_named(tmp_path):
     assert pg.validate(tmp_path / "island", false_alarm=1e-8).agrees is True
     refused = pg.validate(tmp_path / "tampered", false_alarm=1e-8)
     assert refused.agrees is False
-    assert "water_m3, path 0, step 1000" in refused.to_text()
+    assert "water_m3, path 0, step 1000" in refused.text()
     sizes = [sorted(f.stat().st_size for f in (tmp_path / name).iterdir()) for name in ("island", "tampered")]
     assert sizes[0] == sizes[1]
 

@@ -57,8 +57,8 @@ def test_its_paths_agree_with_its_theory(file):
     verdict = pg.validate(ensemble, false_alarm=FALSE_ALARM)
     # 200 paths are too few to judge the spread of some heavy-tailed series: then the verdict must say so of them,
     # and where that leaves no spread judged at all it is no agreement.
-    assert "departs" not in verdict.counts and verdict.counts["agrees"] > 0, verdict.to_text()
-    assert verdict.agrees is (None if coverage.blind(verdict.coverage) else True), verdict.to_text()
+    assert "departs" not in verdict.counts and verdict.counts["agrees"] > 0, verdict.text()
+    assert verdict.agrees is (None if coverage.blind(verdict.coverage) else True), verdict.text()
     for each in verdict.coverage:
         if each.blind:
             assert len(each.missing["spread"]) > 20 and each.series in verdict.title

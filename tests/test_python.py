@@ -41,7 +41,7 @@ def test_what_a_prompt_shows_fits_in_a_few_lines(spec, ens):
 def test_print_gives_what_the_commands_print(spec, ens):
     difference, verdict = pg.difference(spec, spec.variant("dear_power")), pg.validate(ens)
     assert str(difference) == difference.text() and len(repr(difference)) < 200
-    assert str(verdict) == verdict.to_text() and len(repr(verdict)) < 200
+    assert str(verdict) == verdict.text() and len(repr(verdict)) < 200
 
 
 def test_digests_print_as_the_command_does(spec, tmp_path):

@@ -11,7 +11,7 @@ import math
 from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING
 
-from procgen.checks.lifted import Lifted
+from procgen.checks.lifted import SCORE, Lifted
 from procgen.checks.words import FARTHEST, FARTHEST_SHOCK, SCATTER, START, is_signed, of_stays, sort_of
 
 if TYPE_CHECKING:
@@ -24,7 +24,6 @@ _WHOLE_LAW = (
 _SHAPE = "shocks: shape of the law"
 _PRODUCTS = ("shocks: autocorrelation", "shocks: neighbouring paths", "shocks: correlation between series")
 _SIZES = ("shocks: variance", "shocks: spread score")
-_SCORE = 1.5  # a spread score of s is a log variance of about 1.5 s, for laws from Laplace to normal
 _LIKE = 0.5  # share of the shocks' log variance that the values' must show to be called a matter of spread
 _FAR = 1.0  # a shift of the shocks, in their sd, that a bounded score of their spread sees as spread
 
@@ -193,4 +192,4 @@ def _log_variance(row: Check) -> float:
     """How far the shocks' variance is from the stated one, as a logarithm."""
     if row.what == "shocks: variance":
         return abs(math.log(max(row.estimate or 0.0, 1e-300)))
-    return _SCORE * abs(row.estimate or 0.0)
+    return SCORE * abs(row.estimate or 0.0)

@@ -43,6 +43,16 @@ class Coverage:
         return not self.still and "spread" in self.missing and "." not in self.series
 
 
+    def to_dict(self) -> dict[str, Any]:
+        """Plain data; where there is no chance in a series its values were compared, and nothing is left."""
+        return {
+            "series": self.series,
+            "all": not self.missing,
+            "judged": ["values"] if self.still else list(self.judged),
+            "not_judged": dict(self.missing),
+        }
+
+
 def blind(found: Sequence[Coverage]) -> bool:
     """Whether the spread of some series may be anything, and that of no other was judged."""
     unseen = [each for each in found if each.blind]

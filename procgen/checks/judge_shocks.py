@@ -15,7 +15,7 @@ from procgen.checks.saddle import REACH, sum_finding
 from procgen.checks.scores import Scores, largest_gap
 from procgen.checks.shocks import CLUSTER_LAGS, CrossSums, ShockSums
 from procgen.checks.verdict import Check
-from procgen.checks.words import BALANCE
+from procgen.checks.words import BALANCE, BY_PHASE
 
 _EXACT_BELOW = 5_000  # products fewer than this are judged by their exact law
 _CLUSTER_SKEW = 0.408163  # (E s^3)^2 of a cluster score s = sqrt(5) P2, which is (2 sqrt(5) / 7)^2
@@ -34,6 +34,7 @@ def shock_checks(series: str, sums: ShockSums, source: str) -> Iterator[Check]:
     yield from _clustering(series, sums)
     yield from _law(series, sums)
     yield from _by_step(series, sums)
+    yield from _season(series, sums)
     yield from _between_paths(series, sums)
 
 
@@ -183,8 +184,6 @@ def _by_step(series: str, sums: ShockSums) -> Iterator[Check]:
         yield Check.of(series, f"shocks: {kind} by step", "sum over steps", kind, finding)
         yield Check.of(series, f"shocks: {kind} by step", *_worst_step(sums, z, kind))
     yield _balance(series, float(level @ level), float(within.sum()), count)
-    if sums.period and sums.width == 1 and sums.period < count.size:
-        yield _season(series, sums, sums.period)
 
 
 def _balance(series: str, between: float, within: float, count: NDArray) -> Check:
@@ -193,13 +192,25 @@ def _balance(series: str, between: float, within: float, count: NDArray) -> Chec
     return Check.of(series, BALANCE, "sum over steps", "dependence", finding)
 
 
-def _season(series: str, sums: ShockSums, period: int) -> Check:
-    """The level at each phase of the season."""
-    phase = np.arange(sums.profile.shape[1]) % period
-    count, total = (np.bincount(phase, weights=row) for row in sums.profile[:2])
-    z = total[count > 0] / np.sqrt(count[count > 0])
-    finding = judge.squares(float(z @ z), z.size, sums.n)
-    return Check.of(series, "shocks: level by phase", f"period {period}", "level", finding)
+def _season(series: str, sums: ShockSums) -> Iterator[Check]:
+    """The level at each phase of the season beside that of all steps: of one path, too, where it turns often enough.
+
+    Scores are independent unit normals, so that the sum of squares between phases is a chi-square: exact.
+    """
+    if not sums.period:
+        return
+    count, total = sums.by_phase()
+    phases = np.flatnonzero(count)
+    count, total = count[phases], total[phases]
+    if count.size < 2 or count.min() < 2:
+        return
+    apart = total / count - total.sum() / count.sum()
+    finding = judge.squares(float(count @ apart**2), count.size - 1, sums.n)
+    worst = int(np.argmax(np.abs(apart) * np.sqrt(count)))
+    first = int(phases[worst])
+    size = f"{apart[worst]:+.3g}".replace("-", "−")
+    note = f"most at phase {first}, which is that of steps {first}, {first + sums.period}, …, by {size}"
+    yield Check.of(series, BY_PHASE, f"period {sums.period}", "level", finding, note)
 
 
 def _worst_step(sums: ShockSums, z: NDArray, kind: str) -> tuple[str, str, Finding]:

@@ -111,6 +111,7 @@ class ShockSums:
         self.width = -(-self.steps // PROFILE)
         bins = -(-self.steps // self.width)
         self.profile = np.zeros((3, bins))  # count, sum, sum of squares of the scores by step
+        self.phases = np.zeros((2, self.period or 0 if self.width > 1 else 0))  # count, sum, where no profile tells
         self.memory = np.zeros((2, len(self.lags)))  # pairs, sum of products
         self.cluster = np.zeros((2, len(CLUSTER_LAGS)))
         self.asymmetry = np.zeros(2)
@@ -257,6 +258,16 @@ class ShockSums:
                 row[first_step : first_step + len(counts)] += values
             else:
                 _add_in_turn(row, values, first_step, self.width)
+        if self.phases.size:
+            for row, values in zip(self.phases, (counts, sums[0]), strict=True):
+                _add_by_phase(row, values, first_step)
+
+    def by_phase(self) -> NDArray:
+        """Number and sum of the scores at each phase of the period, (2, period)."""
+        if self.phases.size or not self.period:
+            return self.phases
+        phase = np.arange(self.profile.shape[1]) % self.period
+        return np.array([np.bincount(phase, weights=row, minlength=self.period) for row in self.profile[:2]])
 
     def finish(self, lane: ShockLane) -> None:
         """Close a range of paths whose last step has been absorbed."""
@@ -294,7 +305,7 @@ class ShockSums:
             getattr(self, name)[...] += getattr(other, name)
 
 
-SHOCK_ARRAYS = ("sums", "counts", "paths", "profile", "memory", "cluster", "asymmetry", "square", "stretched")
+SHOCK_ARRAYS = ("sums", "counts", "paths", "profile", "memory", "cluster", "asymmetry", "square", "stretched", "phases")
 
 
 def _pairs(view: NDArray, lags: Sequence[int], steps: int) -> NDArray | int:
@@ -316,6 +327,14 @@ def _add_in_turn(row: NDArray, values: NDArray, first: int, width: int) -> None:
             some = values[start:end].reshape(-1, min(width, end - start))
             entries = slice((first + start) // width, (first + start) // width + len(some))
             row[entries] = np.add.accumulate(np.column_stack([row[entries], some]), axis=1)[:, -1]
+
+
+def _add_by_phase(row: NDArray, values: NDArray, first: int) -> None:
+    """Add values that begin at step `first` to the entries of their phases, in their order: one round after another."""
+    period, begin = len(row), first % len(row)
+    rounds = np.zeros((-(-(begin + len(values)) // period) + 1, period))
+    rounds[0], rounds[1:].reshape(-1)[begin : begin + len(values)] = row, values
+    row[:] = np.add.accumulate(rounds, axis=0)[-1]
 
 
 def _runs(known: NDArray) -> dict[int, int]:

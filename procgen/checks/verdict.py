@@ -154,6 +154,11 @@ class Verdict:
         return coverage(self.rows, self.about)
 
     @property
+    def complete(self) -> bool:
+        """Whether of every series each side of its behaviour that can be asked for was judged."""
+        return bool(self.coverage) and not any(each.missing for each in self.coverage)
+
+    @property
     def title(self) -> str:
         part = self.about.get("judged_on")
         return title(self.verdict, self.coverage) + (f" ({part})" if part else "")
@@ -177,9 +182,15 @@ class Verdict:
         return [each.line for each in self.told]
 
     def to_dict(self) -> dict[str, Any]:
-        """The verdict as plain data, in the shape of `validate --json`."""
+        """The verdict as plain data, in the shape of `validate --json`.
+
+        `judged` has a record for each series and pair: `all` tells whether every side of it was judged.
+        """
         return {
             "verdict": self.verdict,
+            "title": self.title,
+            "headline": self.headline,
+            "judged": [each.to_dict() for each in self.coverage],
             "false_alarm": self.false_alarm,
             "checks": [row.row() for row in self.rows],
         }
@@ -190,7 +201,7 @@ class Verdict:
 
         return json.dumps(self.to_dict(), ensure_ascii=False, allow_nan=False)
 
-    def to_text(self, rows: int = 8) -> str:
+    def text(self, rows: int = 8) -> str:
         """The verdict for a terminal, with the `rows` smallest p."""
         from procgen.report.text import verdict_text
 
@@ -207,7 +218,7 @@ class Verdict:
         return write_verdict(self, Path(path), overwrite)
 
     def __str__(self) -> str:
-        return self.to_text()
+        return self.text()
 
     def __repr__(self) -> str:
         return f"Verdict({self.verdict}, {', '.join(f'{n} {what}' for what, n in self.counts.items())})"

@@ -32,12 +32,13 @@ _OUTCOMES = {"agrees": "agree", "departs": "depart"}  # of several
 _MORE_LESS = {"level": ("higher than", "lower than"), "spread": ("larger than", "smaller than")}
 _SIGNED = ("mean", "variance", "level score", "spread score")  # how the checks end whose sign says more or less
 BALANCE = "shocks: balance of paths"
+BY_PHASE = "shocks: level by phase"
 COSINES, SINES = "mean cosine of values", "mean product of sines of values"
 START, SCATTER = "size of the start", "scatter of the start"
 _BETWEEN_PATHS = ("neighbouring paths", BALANCE)  # how the checks end
 _WHOLE = {
     "shocks: level by step": "the shocks' mean at a step is off by {} of their sd, root mean square",
-    "shocks: level by phase": "the shocks' mean at a phase of the season is off by {} of their sd, root mean square",
+    BY_PHASE: "the shocks' mean at a phase of the season is off by {} of their sd, root mean square",
     "shocks: spread by step": "the shocks' sd differs from step to step, by about {} %, root mean square",
     "shocks: level by path": "each path keeps a level of its own, by {} of a shock's sd, root mean square",
     "shocks: spread by path": "the shocks' sd differs from path to path, by about {} %, root mean square",
@@ -201,7 +202,8 @@ def _says(top: Check) -> str:
     if top.what.endswith(_BETWEEN_PATHS):
         return "paths are not independent of each other"
     if top.what == START:
-        return f"the series starts {'narrower' if (top.estimate or 0.0) < 0 else 'wider'} than it goes on"
+        size = "smaller" if (top.estimate or 0.0) < 0 else "larger"
+        return f"first values are mostly {size} than later ones: their variance is another, or only their tails are"
     if top.what == COSINES:
         wider = (top.estimate or 0.0) < (top.theory or 0.0)
         return f"values are spread {'wider' if wider else 'less wide'} than stated"
@@ -232,7 +234,8 @@ def _seen(top: Check) -> str:
         return f"the distribution function of {top.what.removesuffix(_DRAWN)} is off by up to {number(top.estimate, 4)}"
     if top.what in _WHOLE and not top.probe.startswith("worst"):
         factor = _SCORE if top.what in _PERCENT else 1.0
-        return _WHOLE[top.what].format(number((top.estimate or 0.0) * factor, 4 if factor == 1.0 else 2))
+        said = _WHOLE[top.what].format(number((top.estimate or 0.0) * factor, 4 if factor == 1.0 else 2))
+        return f"{said}, {top.note}" if top.what == BY_PHASE and top.note else said
     if top.probe.startswith("worst"):
         return f"{name_of(top)} is off most at {top.probe.removeprefix('worst: ')}, by {number(top.estimate, 4)} se"
     where = f" at {top.probe}" if top.probe else ""

@@ -82,3 +82,36 @@ def test_paths_of_different_spread_are_told_in_percent_of_their_sd():
     line = verdict([{"white_noise": {"sd": 1}}], values).headline[0]
     said = re.search(r"the shocks' sd differs from path to path, by about (.+) %", line)
     assert said and 8.0 < float(said[1]) < 12.0, line
+
+
+T = np.arange(20_000)
+SEASONS = {
+    "peak one step off": lambda size: size * np.cos(2 * np.pi * (T - 17) / 24),
+    "sine for cosine": lambda size: size * np.sin(2 * np.pi * (T - 18) / 24),
+    "another period": lambda size: size * np.cos(2 * np.pi * (T - 18) / 25),
+    "left out": lambda size: 0.0 * T,
+}
+
+
+def season(size, phi=0.7):
+    """Of an autoregression of sd 1 / sqrt(1 - 0.7²) = 1.4, beside a season of 24 steps."""
+    body = {"period": 24, "harmonics": [{"amplitude": size, "peak": 18}]}
+    return [{"constant": 10}, {"seasonal": body}, {"ar": {"phi": phi, "sd": 1}}]
+
+
+@pytest.mark.parametrize("paths", [1, 3])
+@pytest.mark.parametrize("size", [1.4, 3])
+@pytest.mark.parametrize("mistake", SEASONS)
+def test_a_wrong_season_of_few_long_paths_is_a_matter_of_level(mistake, size, paths):
+    """What recurs at each phase makes shocks follow each other, and their spread, law and clustering are wrong, too."""
+    steps = len(T) if paths == 1 else 5000
+    noise = draw(spec_of([{"constant": 10}, {"ar": {"phi": 0.7, "sd": 1}}], paths, steps, 5))["x"]
+    line = verdict(season(size), {"x": noise + SEASONS[mistake](size)[:steps]}).headline[0]
+    assert line.startswith("x: level: "), line
+    assert mistake == "another period" or "most at phase " in line, line
+
+
+@pytest.mark.parametrize(("phi", "kind"), [(0.65, "memory"), (0.9, "memory")])
+def test_memory_beside_a_right_season_stays_memory(phi, kind):
+    line = verdict(season(3), draw(spec_of(season(3, phi), 1, 20_000, 5))).headline[0]
+    assert line.startswith(f"x: {kind}: ") and "level" not in line, line

@@ -81,7 +81,7 @@ TRUE = {
 @pytest.mark.parametrize(("paths", "steps"), [(200, 300), (1, 20_000), (30, 64)])
 def test_true_chains_agree(name, paths, steps):
     found = verdict(TRUE[name], TRUE[name], paths, steps)
-    assert found.agrees is not False, found.to_text()
+    assert found.agrees is not False, found.text()
     assert sum(row.what.startswith("shocks: ") and row.outcome == "agrees" for row in found.rows) > 10
 
 
@@ -91,7 +91,7 @@ def test_stays_of_another_law_are_found_by_their_length(paths, steps):
     found = verdict(chain(1), chain(2), paths, steps)
     rows = {row.what: row for row in found.rows if row.what.startswith("share: ")}
     early, late = rows["share: up after up, up to 6 steps"], rows["share: up after up, longer"]
-    assert early.outcome == late.outcome == "departs", found.to_text()
+    assert early.outcome == late.outcome == "departs", found.text()
     assert early.estimate < early.theory and late.estimate > late.theory
     assert found.headline[0].startswith("x: memory: ")
 
@@ -103,14 +103,14 @@ def test_stays_that_all_have_the_mean_length_are_found():
     paths, steps = np.indices(x.shape).reshape(2, -1)
     table = pd.DataFrame({"path": paths, "step": steps, "x": x.ravel()})
     found = pg.validate(table, spec(chain(1), 200, 300), false_alarm=FALSE_ALARM)
-    assert found.headline[0].startswith("x: memory: lengths of stays are not as stated"), found.to_text()
+    assert found.headline[0].startswith("x: memory: lengths of stays are not as stated"), found.text()
 
 
 def test_the_revealed_state_of_regimes_is_judged_so():
     drawn = pg.render(spec(regimes(1), 200, 300), reveal="all")
     found = pg.validate(drawn, spec(regimes(2), 200, 300), false_alarm=FALSE_ALARM)
     gone = {(row.series, row.what) for row in found.rows if row.outcome == "departs"}
-    assert ("x.regimes.regime", "share: down after down, up to 3 steps") in gone, found.to_text()
+    assert ("x.regimes.regime", "share: down after down, up to 3 steps") in gone, found.text()
     true = pg.validate(pg.render(spec(regimes(2), 100, 300), reveal="all"), false_alarm=FALSE_ALARM)
     assert true.agrees is not False
     assert ("x.regimes.regime", "share: up after up, longer") in {

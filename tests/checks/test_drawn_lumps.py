@@ -118,7 +118,7 @@ def test_of_an_atom_that_moves_with_the_drawn_number_no_law_is_given(body):
 def test_own_output_agrees_and_the_share_of_the_atom_is_judged(name):
     body, zero = (BODIES | SHIFTED)[name][0], (BODIES | SHIFTED)[name][-1]
     found = pg.validate(pg.render(spec(body)), false_alarm=FALSE_ALARM)
-    assert found.agrees, found.to_text()
+    assert found.agrees, found.text()
     shares = [row for row in found.rows if row.what == "share of 0" and row.kind == "law"]
     assert shares and all(row.theory == pytest.approx(zero, rel=1e-6) for row in shares)
     assert any(row.what == "law" and row.outcome == "agrees" for row in found.rows)
@@ -139,4 +139,4 @@ def test_too_few_zeros_are_named(name):
     moved = (x == 0.0) & (rng.random(len(x)) < 0.25)
     x[moved] = rng.choice(x[x > 0.0], int(moved.sum()))
     found = pg.validate(table.assign(x=x), stated, false_alarm=FALSE_ALARM)
-    assert "share of 0" in {row.what for row in found.rows if row.outcome == "departs"}, found.to_text()
+    assert "share of 0" in {row.what for row in found.rows if row.outcome == "departs"}, found.text()

@@ -148,6 +148,6 @@ def test_reasons_name_a_revealed_term_by_its_address(tmp_path):
     regimes = {"regimes": {"branches": branches, "durations": durations}}
     raw = {"procgen": 1, "seed": 4, "paths": 120, "time": {"steps": 60}, "series": {"flow": [{"constant": 3}, regimes]}}
     verdict = validate(render(read_spec(raw), out=tmp_path / "a", reveal="all"))
-    text = verdict.to_text() + str(verdict.to_dict())
+    text = verdict.text() + str(verdict.to_dict())
     assert "flow.regimes" in text
     assert "flow__" not in text

@@ -69,8 +69,8 @@ TRUE = {
 def test_true_data_agree(name):
     body, stored = TRUE[name]
     found = verdict(body, body, **stored)
-    assert found.agrees, found.to_text()
-    assert found.coverage[0].missing == {}, found.to_text()
+    assert found.agrees, found.text()
+    assert found.coverage[0].missing == {}, found.text()
 
 
 PLANTED = {
@@ -106,7 +106,7 @@ def test_a_departure_is_found(name):
     stated, drawn, kind = PLANTED[name]
     found = verdict(drawn, stated, paths=1000, steps=300)
     assert found.agrees is False
-    assert found.headline[0].startswith(f"x: {kind}: "), found.to_text()
+    assert found.headline[0].startswith(f"x: {kind}: "), found.text()
 
 
 def test_the_law_of_a_value_is_judged_without_moments():

@@ -42,7 +42,7 @@ def test_gaps_filled_with_one_number_are_counted(share):
     count, (path, step) = np.count_nonzero(filled[:, 16:] == 12.3), np.argwhere(filled[:, 16:] == 12.3)[0]
     said = f"x: structure: {count:,} values are exactly 12.3; the first at path {path}, step {step + 16}"
     verdict = judged(filled)
-    assert verdict.agrees is False and verdict.headline[0].startswith(said), verdict.to_text()
+    assert verdict.agrees is False and verdict.headline[0].startswith(said), verdict.text()
 
 
 def test_values_cut_off_at_an_end_are_told_as_that():

@@ -239,7 +239,7 @@ def test_an_argument_of_another_kind_is_told(frame):
 
 
 def test_order_of_rows_and_steps_beyond_the_spec_are_told(frame):
-    ordered = " ".join(validate(frame.drop(columns="step"), SPEC).to_text().split())
+    ordered = " ".join(validate(frame.drop(columns="step"), SPEC).text().split())
     assert "rows of a path are taken in their order; else name the right one with --step-col" in ordered
     spec = read_spec({**RAW, "time": {**RAW["time"], "steps": 40}})
     assert validate(frame, spec).title.endswith(" (steps 40–59 are beyond the 40 steps of the spec; judged on all 60)")
@@ -278,7 +278,7 @@ def test_a_mean_alone_is_no_agreement():
     verdict = validate(table, spec)
     assert verdict.agrees is None
     assert verdict.title.startswith("CANNOT BE JUDGED: nothing about the spread of vol could be judged; only level")
-    assert "needs about 95 steps, not 50" in verdict.to_text()
+    assert "needs about 95 steps, not 50" in verdict.text()
 
 
 QUARTERS = {**RAW, "time": {"start": "2027-10-31", "every": "15min", "steps": 40, "zone": "Europe/Berlin"}}
@@ -395,7 +395,7 @@ def test_rows_of_many_paths_are_not_taken_for_one(frame):
 def test_what_was_assumed_of_a_table_is_said_in_the_first_line(frame, tmp_path):
     counted = "steps in step count from 1; taken as steps 0 to 59"
     from_one = validate(frame.assign(step=frame["step"] + 1), SPEC)
-    assert from_one.agrees is True and from_one.to_text().splitlines()[0].endswith(f" ({counted})")
+    assert from_one.agrees is True and from_one.text().splitlines()[0].endswith(f" ({counted})")
     some = validate(frame[frame["path"] < 120].assign(step=frame["step"] + 1, y=frame["y"] + 9), SPEC)
     both = f"{counted}; 120 of the 150 paths stated"
     assert some.agrees is False and some.title == f"DEPARTS from what the spec states ({both})"

@@ -28,7 +28,7 @@ def test_what_every_term_reveals_agrees(kind, tmp_path):
     spec = read_text(example_spec(kind), CATALOGUE, LAWS).changed(paths=200, steps=48)
     pg.render(spec, out=tmp_path / "out", reveal="all")
     found = pg.validate(tmp_path / "out", false_alarm=FALSE_ALARM)
-    assert "departs" not in found.counts, found.to_text()
+    assert "departs" not in found.counts, found.text()
     outputs = {f"x.{kind}.{output}" for output in CATALOGUE[kind].outputs_of(spec.series["x"].of[0].values)}
     assert outputs <= {row.series for row in found.rows}
 
@@ -60,5 +60,5 @@ def test_what_makes_a_hidden_output_itself_is_judged(name):
     for drawn, agrees in ((stated, True), (spec({kind: true | change}, output), False)):
         found = pg.validate(pg.render(drawn).to_pandas(), stated, false_alarm=FALSE_ALARM)
         (row,) = [row for row in found.rows if row.series == "y" and row.what == f"share: {what}"]
-        assert row.outcome == ("agrees" if agrees else "departs"), found.to_text()
+        assert row.outcome == ("agrees" if agrees else "departs"), found.text()
         assert found.agrees is not False if agrees else found.agrees is False

@@ -63,7 +63,7 @@ BODIES = {
 @pytest.mark.parametrize("share, gap", [(0.1, 1.2), (0.4, 9)])
 def test_true_ensembles_agree(name, share, gap):
     verdict = pg.validate(pg.render(spec(BODIES[name], share, gap)), false_alarm=1e-8)
-    assert "departs" not in verdict.counts and verdict.counts["agrees"] > 0, verdict.to_text()
+    assert "departs" not in verdict.counts and verdict.counts["agrees"] > 0, verdict.text()
 
 
 @pytest.mark.parametrize(
@@ -78,17 +78,17 @@ def test_true_ensembles_agree(name, share, gap):
 )
 def test_saboteurs_behind_gaps_are_found_and_named(drawn, named):
     verdict = pg.validate(pg.render(spec(**drawn)), spec=spec())
-    assert verdict.agrees is False and named in verdict.to_text()
+    assert verdict.agrees is False and named in verdict.text()
 
 
 def test_what_is_missing_by_itself_has_its_share_tested():
     stated = pg.load(HEAD | {"series": {"x": [{"missing": {"of": AR, "share": 0.05}}]}})
     other = pg.load(HEAD | {"series": {"x": [{"missing": {"of": AR, "share": 0.06}}]}})
     verdict = pg.validate(pg.render(other), spec=stated)
-    assert verdict.agrees is False and "x: share of missing values: larger than stated" in verdict.to_text()
+    assert verdict.agrees is False and "x: share of missing values: larger than stated" in verdict.text()
     assert pg.validate(pg.render(stated), false_alarm=1e-8).agrees
     gaps = pg.load(HEAD | {"series": {"x": [{"missing": {"of": AR, "share": 0.05, "gap": 1.5}}]}})
-    assert "x: share of gaps that go on: larger than stated" in pg.validate(pg.render(gaps), spec=stated).to_text()
+    assert "x: share of gaps that go on: larger than stated" in pg.validate(pg.render(gaps), spec=stated).text()
 
 
 def test_values_left_out_for_their_size_are_found():
@@ -104,7 +104,7 @@ def test_values_left_out_for_their_size_are_found():
 
 
 def test_what_cannot_be_judged_says_why():
-    text = pg.validate(pg.render(spec(BODIES["counts"]))).to_text()
+    text = pg.validate(pg.render(spec(BODIES["counts"]))).text()
     assert "values are missing: the ranks of what comes after a gap" in text
     assert "averages over steps: values are missing: not judged" in text
 
@@ -128,4 +128,4 @@ def test_a_share_drawn_by_path_is_not_judged_as_one_share():
     share = {"draw": {"uniform": [0.1, 0.3]}, "over": "path"}
     body = {"x": [{"missing": {"of": AR, "share": share}}]}
     verdict = pg.validate(pg.render(HEAD | {"series": body}), false_alarm=1e-8)
-    assert verdict.agrees and "its share or length is drawn by path: not judged" in verdict.to_text()
+    assert verdict.agrees and "its share or length is drawn by path: not judged" in verdict.text()

@@ -121,4 +121,4 @@ def test_another_number_of_paths_is_told():
     path, step = np.divmod(np.arange(x.size), STEPS)
     verdict = validate(pd.DataFrame({"path": path, "step": step, "x": x.ravel()}), spec)
     assert verdict.agrees is True
-    assert "paths: 300 paths, where the spec states 400: judged on those that are there" in verdict.to_text()
+    assert "paths: 300 paths, where the spec states 400: judged on those that are there" in verdict.text()

@@ -106,7 +106,7 @@ UNSEEN = {"claims", "few whole numbers", "few tenths"}  # cells so coarse that n
 def test_the_ends_of_laws_the_starts_of_walks_and_coarse_cells(case):
     entries, store, paths, steps = CONTRARY[case]
     verdict = verdict_of(entries, store, 6, paths, steps, false_alarm=1e-8)  # nine of them: 9e-8 of the suite's 1e-6
-    assert verdict.agrees is (None if case in UNSEEN else True), verdict.to_text()
+    assert verdict.agrees is (None if case in UNSEEN else True), verdict.text()
     assert any(row.outcome == "agrees" and row.what == "mean" for row in verdict.rows)
 
 

@@ -192,7 +192,7 @@ def test_the_spread_of_a_walk_that_cannot_be_undone_is_found():
     """A heavy walk 15 % too wide beside heavy noise: 2.9 of the 4.9 of a change over 32 steps are the walk's."""
     wide = [{"random_walk": {"sd": 0.345, "law": HEAVY}}, WALK[1]]
     found = planted(Departure("", WALK, wide), 7, paths=2000, steps=400)
-    assert "variance of changes" in {row.what for row in found.rows if row.outcome == "departs"}, found.to_text()
+    assert "variance of changes" in {row.what for row in found.rows if row.outcome == "departs"}, found.text()
     assert found.headline[0].startswith(("x: spread: ", "x: memory: "))  # its share of the variance is both
     assert verdict(WALK, draw(spec_of(WALK, 2000, 400, 8))).agrees is True
 
@@ -220,6 +220,6 @@ LEVELS = {
 def test_a_level_by_path_that_is_not_there_is_found(name):
     stated, drawn, body, what = LEVELS[name]
     found = held_against(stated, drawn, body)
-    assert what in {row.what for row in found.rows if row.outcome == "departs"}, found.to_text()
+    assert what in {row.what for row in found.rows if row.outcome == "departs"}, found.text()
     assert found.headline[0].startswith("x: memory: ")
     assert held_against(stated, stated, body, seed=4).agrees is True

@@ -9,6 +9,7 @@ from scipy import stats
 
 from procgen.chance import kernel
 from procgen.chance.laws import LAWS
+from procgen.checks import shocks
 from procgen.checks.judge_shocks import cross_checks, shock_checks
 from procgen.checks.scores import BINS, Scores, bin_counts
 from procgen.checks.shocks import CrossSums, ShockLane, ShockSums, _add_in_turn
@@ -61,6 +62,29 @@ def test_a_seasonal_profile_is_found_at_its_phase():
     name = "shocks: level by phase period 12"
     assert found[0][name].log_p > math.log(1e-3)
     assert found[1][name].log_p < found[1]["shocks: level by step sum over steps"].log_p < math.log(1e-6)
+
+
+@pytest.mark.parametrize("paths", [1, 3])
+def test_phases_are_the_same_whether_or_not_a_profile_tells_them(paths, monkeypatch):
+    """Of series that are too long for a profile by step, phases are summed by themselves, however tiles are cut."""
+    z, found = np.random.default_rng(7).standard_normal((700, paths)), []
+    for longest, tiles in ((1000, (700,)), (100, (700,)), (100, (64, 192))):
+        monkeypatch.setattr(shocks, "PROFILE", longest)
+        sums, lane, at = ShockSums(SCORES[NORMAL], 700, period=24), ShockLane(paths), 0
+        while at < 700:
+            size = tiles[at % len(tiles)]
+            sums.absorb(z[at : at + size], at, lane)
+            at += size
+        sums.finish(lane)
+        found.append(sums)
+    assert found[0].phases.size == 0 and (found[1].phases == found[2].phases).all()
+    expected = [(paths * len(z[k::24]), z[k::24].sum()) for k in range(24)]
+    for sums in found:
+        np.testing.assert_allclose(sums.by_phase().T, expected, rtol=1e-9, atol=1e-12)
+    row = checks_of(found[1])["shocks: level by phase period 24"]
+    mean = [z[k::24].mean() - z.mean() for k in range(24)]
+    count = [z[k::24].size for k in range(24)]
+    assert row.log_p == pytest.approx(stats.chi2.logsf(np.dot(count, np.square(mean)), 23), rel=1e-9)
 
 
 def test_unknown_first_steps_and_single_gaps_are_left_out():

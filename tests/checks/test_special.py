@@ -55,9 +55,9 @@ TRUE = {
 @pytest.mark.parametrize("name", TRUE)
 def test_true_data_agree(name):
     found = verdict(TRUE[name], TRUE[name])
-    assert found.agrees, found.to_text()
+    assert found.agrees, found.text()
     if name not in ("moving counts", "zero inflated"):  # what they follow is not seen
-        assert found.coverage[0].missing == {}, found.to_text()
+        assert found.coverage[0].missing == {}, found.text()
 
 
 WRONG = {
@@ -85,7 +85,7 @@ WRONG = {
 @pytest.mark.parametrize("name", WRONG)
 def test_a_departure_is_found(name):
     found = verdict(*WRONG[name])
-    assert found.agrees is False, found.to_text()
+    assert found.agrees is False, found.text()
 
 
 NAMED = {
@@ -100,7 +100,7 @@ NAMED = {
 @pytest.mark.parametrize("name", NAMED)
 def test_what_makes_a_term_itself_is_named(name):
     found = verdict(*WRONG[name])
-    assert NAMED[name] in {row.what for row in found.rows if row.outcome == "departs"}, found.to_text()
+    assert NAMED[name] in {row.what for row in found.rows if row.outcome == "departs"}, found.text()
 
 
 def test_events_are_counted_where_a_chance_was_taken():
@@ -120,7 +120,7 @@ def test_rounding_is_taken_in_exactly():
     for term, decimals in ((demand, 0), (TRUE["jumps"], 0), (TRUE["merton"], 2)):
         found = pg.validate(pg.render(spec(term, decimals=decimals)), false_alarm=FALSE_ALARM)
         shocks = [row for row in found.rows if row.what.startswith("shocks:")]
-        assert len(shocks) > 10 and found.agrees is not False, found.to_text()
+        assert len(shocks) > 10 and found.agrees is not False, found.text()
 
 
 def test_a_bridge_may_rest_at_a_whole_number():

@@ -69,7 +69,7 @@ def test_stays_of_another_law_but_the_same_mean_are_called_clustering():
     """
     found = verdict(spreads(3), draw(spec_of(spreads(1), 2000, 500, 4)))
     gone = {row.probe for row in found.rows if row.what == "slope of squares" and row.outcome == "departs"}
-    assert "lag 4" in gone and "lag 1" not in gone, found.to_text()
+    assert "lag 4" in gone and "lag 1" not in gone, found.text()
     assert found.headline[0].startswith("x: clustering: ")
     true = verdict(spreads(3), draw(spec_of(spreads(3), 2000, 500, 4)))
-    assert true.agrees is True, true.to_text()
+    assert true.agrees is True, true.text()

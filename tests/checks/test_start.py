@@ -46,14 +46,14 @@ def of_start(found):
 @pytest.mark.parametrize("variance", [0.0, 0.05, 3.0])
 def test_a_garch_that_starts_from_another_variance_is_named(variance):
     found = verdict(GARCH, {"x": garch(variance)})
-    way = "wider" if variance > 1 else "narrower"
-    assert found.headline[0].startswith(f"x: spread: the series starts {way} than it goes on (the first values' mean")
+    way = "larger" if variance > 1 else "smaller"
+    assert found.headline[0].startswith(f"x: spread: first values are mostly {way} than later ones: their ")
 
 
 def test_an_autoregression_without_a_past_is_named():
     assert verdict(AR, {"x": ar(100)}).agrees is True
     found = verdict(AR, {"x": ar(0)})
-    assert found.headline[0].startswith("x: spread: the series starts narrower than it goes on (the first values' mean")
+    assert found.headline[0].startswith("x: spread: first values are mostly smaller than later ones: their ")
 
 
 @pytest.mark.parametrize("body, agrees", [(GARCH, None), (AR, True), (SEASON, True)], ids=["garch", "ar", "season"])

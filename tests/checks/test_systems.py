@@ -38,7 +38,7 @@ def probes(found):
 @pytest.mark.parametrize("lag", [1, 4, 6])
 def test_a_weight_that_no_component_shows_alone_is_found(lag):
     found = planted(Departure("", led(0.2, lag), led(0.1, lag)), 5, paths=300, steps=300)
-    assert f"lag +{lag}" in probes(found), found.to_text()
+    assert f"lag +{lag}" in probes(found), found.text()
     assert {row.series for row in found.rows if row.outcome == "departs"} == {"x ~ y"}
     assert found.headline[0].startswith("x ~ y: dependence: ")
     assert verdict(led(0.2, lag), draw(spec_of(led(0.2, lag), 300, 300, 6))).agrees is True

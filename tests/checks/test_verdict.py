@@ -98,8 +98,12 @@ def test_what_cannot_be_trusted_leaves_the_family():
 def test_json_has_the_published_shape():
     rows = [check(9.0), Check("y", "mean", "step 0", "level", theory=float("inf"), outcome="reported", note="a reason")]
     data = json.loads(Verdict(rows, 0.01).to_json())
-    assert list(data) == ["verdict", "false_alarm", "checks"]
+    assert list(data) == ["verdict", "title", "headline", "judged", "false_alarm", "checks"]
     assert data["verdict"] == "departs"
+    assert data["title"].startswith("DEPARTS") and data["headline"][0].startswith("x: ")
+    first, second = data["judged"]
+    assert first["series"] == "x" and first["all"] is False and "law" in first["not_judged"]
+    assert second["judged"] == [] and second["not_judged"]["level"] == "a reason"
     assert data["false_alarm"] == 0.01
     assert [tuple(row) for row in data["checks"]] == [COLUMNS, COLUMNS]
     assert data["checks"][1]["theory"] is None
@@ -179,8 +183,8 @@ def test_a_correlation_is_called_so_only_where_it_can_be_one():
         row = of("shocks: autocorrelation", estimate, -5000.0, "memory", probe="lag 1")
         verdict = Verdict([row], 0.001)
         assert f"({name} at lag 1 is " in verdict.headline[0]
-        assert f"  {name}  lag 1" in verdict.to_text()
-        assert "< 1e−300" in verdict.to_text() and "1e−2" not in verdict.to_text()
+        assert f"  {name}  lag 1" in verdict.text()
+        assert "< 1e−300" in verdict.text() and "1e−2" not in verdict.text()
 
 
 def test_statistics_are_told_by_what_was_compared():
@@ -210,7 +214,7 @@ def test_two_numbers_that_differ_are_shown_to_differ():
     row = of("mean", 120.0004, -200.0, "level", probe="step 4", theory=120.0)
     verdict = Verdict([row], 0.001)
     assert "mean at step 4 is 120.0004, stated 120, p" in verdict.headline[0]
-    assert "120  120.0004" in verdict.to_text()
+    assert "120  120.0004" in verdict.text()
 
 
 def test_a_known_value_that_is_missed_says_by_how_much():
@@ -224,9 +228,27 @@ def test_a_known_value_that_is_missed_says_by_how_much():
 def test_reasons_that_differ_in_counts_alone_are_told_once():
     notes = [f"{n} paths are too few for the skewed tail that a p of 2e-05 lies in" for n in (264, 268, 266)]
     rows = [Check("x", "slope", f"lag {n}", "memory", outcome="untestable", note=note) for n, note in enumerate(notes)]
-    text = Verdict(rows, 0.001).to_text()
+    text = Verdict(rows, 0.001).text()
     assert text.count("too few for the skewed tail") == 2  # once by side, once by check
     assert "slope ×3: 264–268 paths are too few for the skewed tail that a p of 2e-05 lies in" in " ".join(text.split())
     other = "only 40 paths of at least 100: reported, not judged"
     assert alike([*notes, other])[other] == other
     assert alike(["1,000 paths are few", "999 paths are few"])["999 paths are few"] == "999–1,000 paths are few"
+
+
+@pytest.mark.parametrize(("options", "code"), [([], 0), (["--in-full"], 2)])
+def test_a_pipeline_may_insist_that_all_was_judged(options, code, tmp_path):
+    """Of a garch of few steps, what came before step 0 cannot be forgotten: its clustering and law are not judged."""
+    from typer.testing import CliRunner
+
+    from procgen.cli import app
+
+    body = [{"garch": {"omega": 0.05, "alpha": 0.1, "beta": 0.85}}]
+    raw = {"procgen": 1, "seed": 3, "paths": 600, "time": {"steps": 60}, "series": {"x": body}}
+    (tmp_path / "spec.yaml").write_text(json.dumps(raw))
+    runner = CliRunner()
+    assert runner.invoke(app, ["render", str(tmp_path / "spec.yaml"), "-o", str(tmp_path / "out")]).exit_code == 0
+    found = runner.invoke(app, ["validate", str(tmp_path / "out"), "--json", *options])
+    data = json.loads(found.stdout)
+    assert found.exit_code == code and data["verdict"] == "agrees"
+    assert data["judged"][0]["all"] is False and data["title"].startswith("AGREES on ")

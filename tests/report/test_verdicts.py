@@ -19,7 +19,7 @@ def verdict(z=(1.0, 9.0)):
 
 
 def test_text_says_it_all():
-    text = verdict().to_text()
+    text = verdict().text()
     assert text.startswith("DEPARTS from what the spec states\n  load: spread: the variance is larger than stated")
     assert "2,000 paths × 500 steps; 3 checks: 1 agrees, 1 departs, 1 untestable" in text
     assert "a shock variance off by a factor of 1 ± 0.0048" in text  # (3.4808 + 1.2816) / 1000 at level 0.001 / 2
@@ -28,15 +28,15 @@ def test_text_says_it_all():
 
 
 def test_text_of_the_other_outcomes():
-    agrees = Verdict(verdict(z=(0.2,)).rows[:1], 0.001, ABOUT).to_text()
+    agrees = Verdict(verdict(z=(0.2,)).rows[:1], 0.001, ABOUT).text()
     assert agrees.startswith("AGREES on spread only: level, memory, clustering, law and dependence of load")
     assert "load: spread; not judged: level, memory" in agrees
     both = verdict(z=(0.2,))
     assert both.agrees is True and both.title.startswith("AGREES on a part only") and "x<script>" in both.title
     alone = Verdict([row for row in both.rows if row.series == "x<script>"], 0.001, ABOUT)
     assert alone.agrees is None
-    assert alone.to_text().startswith("CANNOT BE JUDGED: no check of the behaviour could be made")
-    assert verdict(z=()).to_text().startswith("CANNOT BE JUDGED")
+    assert alone.text().startswith("CANNOT BE JUDGED: no check of the behaviour could be made")
+    assert verdict(z=()).text().startswith("CANNOT BE JUDGED")
 
 
 @pytest.mark.parametrize(
@@ -97,9 +97,9 @@ def departing(series="a_long_name_of_a_series"):
 
 
 def test_text_counts_in_singular_and_plural():
-    text = departing().to_text()
+    text = departing().text()
     assert "1 path × 500 steps; 2 checks: 2 depart\n" in text
-    assert "2,000 paths × 500 steps; 1 check: 1 agrees\n" in Verdict(verdict(z=(0.2,)).rows[:1], 0.001, ABOUT).to_text()
+    assert "2,000 paths × 500 steps; 1 check: 1 agrees\n" in Verdict(verdict(z=(0.2,)).rows[:1], 0.001, ABOUT).text()
 
 
 def test_page_says_once_that_it_departs_and_lets_long_names_break():
@@ -125,12 +125,12 @@ def test_a_departure_that_cannot_be_is_not_called_the_smallest_one_found():
         return Check.of("x ~ y" if what.endswith("series") else "x", what, "", "memory", unit(0.1, error, theory))
 
     few = [of("shocks: variance", 0.4, 1.0), of("shocks: autocorrelation", 0.25), of("shocks: clustering", 0.1)]
-    text = " ".join(Verdict(few, 0.001).to_text().split())
+    text = " ".join(Verdict(few, 0.001).text().split())
     assert "a shock variance off by a factor of 1 + 1.9, while no smaller one is certain to be found; " in text
     assert "; no correlation between shocks of one path is certain to be found; a correlation of 0.4" in text
     assert verdict_page(Verdict(few, 0.001)).count('<td class="n">none</td>') == 1
     pair = of("shocks: correlation between series", 0.3, 0.5)  # from 0.5 to −1 is 1.5, and 1.4 is found
-    assert "a correlation between series' shocks off by 1." in " ".join(Verdict([pair], 0.001).to_text().split())
+    assert "a correlation between series' shocks off by 1." in " ".join(Verdict([pair], 0.001).text().split())
     pair = of("shocks: correlation between series", 0.4, 0.5)
-    text = " ".join(Verdict([pair], 0.001).to_text().split())
+    text = " ".join(Verdict([pair], 0.001).text().split())
     assert "x ~ y: no wrong correlation between series' shocks is certain to be found" in text

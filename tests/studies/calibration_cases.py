@@ -34,6 +34,7 @@ from tests.studies.calibration_draws import (
 from tests.studies.calibration_shocks import (
     between_series,
     by_path,
+    by_phase,
     clustering,
     component,
     farthest_of,
@@ -373,6 +374,8 @@ CASES = (
     Case("shocks: variance of sums, 2 stretches of 256 steps", 10_000_000, ratio(2, 510)),
     Case("shocks: balance of 30 paths, 20 steps", 10_000_000, ratio(20, 580, judge.evenness)),
     Case("shocks: balance of 2,000 paths, 200 steps", 10_000_000, ratio(200, 399_800, judge.evenness)),
+    Case("shocks: level by phase, 1 path of 100 steps", 500_000, by_phase(1, 100, 24), 400),
+    Case("shocks: level by phase, 200 paths of 60 steps", 500_000, by_phase(200, 60, 12), 400),
     Case("shocks: level by path, 30 paths of 200 steps", 200_000, by_path("shocks: level by path", 30, 200), 300),
     Case("shocks: spread by path, 30 paths of 200 steps", 200_000, by_path("shocks: spread by path", 30, 200), 300),
     Case("shocks: spread by path, 200 paths of 20 steps", 50_000, by_path("shocks: spread by path", 200, 20), 2000),

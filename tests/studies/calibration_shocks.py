@@ -81,6 +81,22 @@ def products(steps: int, paths: int, lag: int) -> Findings:
     return of_one_number(draw, lambda x: judge_shocks._lag_finding(chains, lag, pairs, x), 0.0, math.sqrt(pairs))
 
 
+def by_phase(paths: int, steps: int, period: int) -> Findings:
+    """The level at the phases of a season: sums of scores by phase, drawn from their law."""
+    count = paths * np.bincount(np.arange(steps) % period)
+
+    def findings(rng: Rng, count_of: int) -> Iterator[tuple[Finding, int]]:
+        sums = ShockSums(Scores(LAWS["normal"]()), steps, period=period)
+        sums.n = paths * steps
+        sums.profile[0] = paths
+        for total in np.sqrt(count) * rng.standard_normal((count_of, period)):
+            sums.profile[1] = 0.0
+            sums.profile[1, :period] = total
+            yield next(judge_shocks._season("x", sums)).finding, 1  # type: ignore[misc]
+
+    return findings
+
+
 def by_path(what: str, paths: int, steps: int) -> Findings:
     """Levels or spreads of paths: sums of scores and of their squares by path, drawn from their laws."""
     scores = Scores(LAWS["normal"]())

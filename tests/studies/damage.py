@@ -54,8 +54,8 @@ class Victim:
     def validated(self) -> bool:
         """Whether `validate` takes the values; if not, it names the part."""
         found = pg.validate(str(self.out))
-        if found.agrees is False and self.part.name not in found.to_text():
-            raise AssertionError(f"it does not name the part: {found.to_text()}")
+        if found.agrees is False and self.part.name not in found.text():
+            raise AssertionError(f"it does not name the part: {found.text()}")
         return found.agrees is not False
 
     def same(self) -> bool:

@@ -109,7 +109,7 @@ def test_blocks_of_half_the_length_are_found(steps, drawn, found):
     verdict = pg.validate(pg.render(spec(drawn)), spec=pg.load(spec(24)), false_alarm=1e-8)
     assert verdict.agrees is found
     if not found:
-        assert "memory" in verdict.to_text().splitlines()[1]
+        assert "memory" in verdict.text().splitlines()[1]
 
 
 def test_ranks_hold_for_coarse_numbers_and_beside_a_trend():

@@ -192,7 +192,7 @@ def test_a_true_ensemble_is_not_called_departing(body):
     """Counts come back from the filter up to rounding only: their ranks must not be taken from them."""
     spec = graph_of(f"  x: {lag(body, '0.5')}").spec
     verdict = pg.validate(pg.render(spec.changed(paths=4000)), false_alarm=1e-9)
-    assert "departs" not in verdict.counts and verdict.counts["agrees"] > 10, verdict.to_text()
+    assert "departs" not in verdict.counts and verdict.counts["agrees"] > 10, verdict.text()
 
 
 @pytest.mark.parametrize(

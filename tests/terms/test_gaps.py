@@ -139,4 +139,4 @@ def test_tables_of_anyone_may_have_the_gaps_that_are_declared(tmp_path):
     assert pg.validate(tmp_path / "x.csv", spec=stated, false_alarm=1e-8).agrees
     undeclared = pg.load(HEAD | {"series": {"x": BODY}})
     verdict = pg.validate(table, spec=undeclared, false_alarm=1e-8)
-    assert verdict.agrees is False and "not finite" in verdict.to_text()
+    assert verdict.agrees is False and "not finite" in verdict.text()

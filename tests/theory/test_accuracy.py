@@ -107,8 +107,8 @@ def test_weekly_autoregression_at_100_000_steps_is_quick():
     phi = np.zeros(168)
     phi[[0, 23, 167]] = 0.3, 0.2, 0.45
     x = series(tuple(phi))
-    begin = time.perf_counter()
+    begin = time.process_time()
     gamma = x.autocovariance(np.arange(100_000))
-    assert time.perf_counter() - begin < 2.0
+    assert time.process_time() - begin < 2.0
     again = phi @ np.stack([gamma[168 - i : -i] for i in range(1, 169)])
     np.testing.assert_allclose(gamma[168:], again, rtol=0, atol=1e-12)  # the Yule-Walker equations hold

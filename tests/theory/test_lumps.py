@@ -153,13 +153,13 @@ def test_a_bound_that_is_met_too_often_is_named(decimals):
     more = {} if decimals is None else {"decimals": decimals}
     spec, wrong = (HEAD | {"paths": 3000, "series": {"x": {"of": [b], **more}}} for b in (stated, other))
     true = pg.validate(pg.render(spec).to_pandas(), spec, false_alarm=FALSE_ALARM)
-    assert true.agrees, true.to_text()
+    assert true.agrees, true.text()
     (row,) = [row for row in true.rows if row.what == "share of -1" and row.probe == "step 0"]
     assert row.theory == pytest.approx(stats.norm.cdf(-0.475 if decimals else -0.5), rel=1e-6)
     values = pg.render(wrong).to_pandas()
     values["x"] = np.where(values["x"] <= -0.6, -1.0, values["x"])
     found = pg.validate(values, spec, false_alarm=FALSE_ALARM)
-    assert "share of -1" in {row.what for row in found.rows if row.outcome == "departs"}, found.to_text()
+    assert "share of -1" in {row.what for row in found.rows if row.outcome == "departs"}, found.text()
 
 
 def test_what_is_held_at_its_bound_more_than_half_of_the_time():

@@ -63,13 +63,14 @@ def test_a_sum_of_parts_by_the_normal_equations_in_high_precision():
 @SOME
 @given(PARTIALS, PARTIALS)
 def test_half_lives_against_statsmodels(partials, others):
-    """The last lag with a correlation above 1/2 in size, of 5,000 given by ArmaProcess; none is later."""
+    """The last lag with a correlation above 1/2 in size, of 5,000 given by ArmaProcess, where none is later."""
     phi, theta = coefficients([0.9 * r for r in partials]), coefficients(others)
     acf = ArmaProcess([1, *(-c for c in phi)], [1, *theta]).acf(5000)
     x = series_of({"arma": {"phi": list(phi), "theta": list(theta), "sd": 1}})
     sizes = np.sort(np.abs(np.abs(acf[:5000]) - 0.5))
     if sizes[0] > 1e-9:  # else rounding decides
-        assert x.half_life == np.flatnonzero(np.abs(acf) > 0.5)[-1] + 1
+        seen = np.flatnonzero(np.abs(acf) > 0.5)[-1] + 1
+        assert x.half_life == seen if seen < 5000 else x.half_life >= seen
 
 
 def test_half_lives_of_seasons_and_of_what_has_none():

@@ -6,6 +6,7 @@ the fourth moment ends.
 
 from __future__ import annotations
 
+import math
 from itertools import pairwise
 
 import mpmath as mp
@@ -254,12 +255,18 @@ def test_exponential_garch_from_a_given_variance():
 def test_exponential_garch_of_heavy_tails_whose_sizes_lower_the_variance(df):
     """E h = Π E exp(βʲ g) and Cov(e²(t+1), e²(t)) by the quadrature of SciPy over its t (Nelson 1991, appendix)."""
     unit = np.sqrt(df / (df - 2.0))
-    size = 2.0 * quad(lambda y: y * student_t.pdf(y, df), 0.0, np.inf)[0] / unit
+    top = float(student_t.pdf(0.0, df))
+
+    def density(y):  # a formula of its own: SciPy's takes 60 times as long, and is asked some 500,000 times
+        return top * (1.0 + y * y / df) ** (-0.5 * (df + 1.0))
+
+    assert [density(y) for y in (-300.0, -1.0, 4.0)] == pytest.approx(student_t.pdf([-300.0, -1.0, 4.0], df), rel=1e-12)
+    size = 2.0 * quad(lambda y: y * density(y), 0.0, np.inf)[0] / unit
 
     def mean(q, power=0):
         def integrand(y):
             z = y / unit
-            return z**power * np.exp(q * (-0.3 * (abs(z) - size) + 0.2 * z)) * student_t.pdf(y, df)
+            return z**power * math.exp(q * (-0.3 * (abs(z) - size) + 0.2 * z)) * density(y)
 
         ends = (-np.inf, -300.0, -30.0, -3.0, 0.0, 3.0, 30.0, 300.0, np.inf)
         return sum(quad(integrand, *piece, epsabs=1e-14)[0] for piece in pairwise(ends))
