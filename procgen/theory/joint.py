@@ -176,7 +176,7 @@ class LargerNormal(_Maximum):
         h, k = (np.where(z == 0.0, TINY, z) for z in (h, k))
         ratio = np.clip(k / h, -1e300, 1e300), np.clip(h / k, -1e300, 1e300)
         areas = owens_t(h, (ratio[0] - self.rho) / self._root) + owens_t(k, (ratio[1] - self.rho) / self._root)
-        return np.maximum(0.5 * (ndtr(h) + ndtr(k)) - areas - np.where(h * k < 0.0, 0.5, 0.0), 0.0)
+        return np.maximum(0.5 * (ndtr(h) + ndtr(k)) - areas - np.where((h < 0.0) != (k < 0.0), 0.5, 0.0), 0.0)
 
     def cdf(self, x: Any) -> NDArray:
         return self._both_below(*self._scaled(x))

@@ -6,7 +6,7 @@ ascending order, and `chance(x)`, that of x. `pdf` is the density of the rest.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from functools import cached_property
 from typing import Any
 
@@ -17,6 +17,8 @@ from procgen.theory.mixedlaw import MixedLaw
 from procgen.theory.unknown import Unknown
 
 ROUNDING = 1e-12  # of the largest value
+ROUGH = 1e-7  # error of a quadrature against its value, from which on it is not known
+EDGES = 30  # values with a chance of their own between which a quadrature is done piece by piece
 NEAR = BESIDE = 1e-6  # of the distance of two values of a lattice: what is as near to a value is it
 
 
@@ -312,22 +314,47 @@ def powered(law: Any, n: int) -> Mapped:
 
 
 def moments(law: Any) -> tuple[float, float]:
-    """Mean and variance about the median, from the areas beyond: exact but for the quadrature, some 1e-10."""
-    from scipy.integrate import quad
+    """Mean and variance about the median, from the areas beyond: exact but for the quadrature, some 1e-10.
 
+    Raises Unknown where the quadrature does not come to that, as where there is no variance.
+    """
     middle, low, high = (float(law.ppf(p)) for p in (0.5, 0.0, 1.0))
+    spread = abs(float(law.ppf(0.9)) - float(law.ppf(0.1)))
+    edges = [abs(x - middle) for x in atoms_of(law)[:EDGES]]
     parts = []
     for end, beyond in ((high, lambda d: law.sf(middle + d)), (low, lambda d: law.cdf(middle - d))):
         reach = abs(end - middle) if end == end else np.inf  # what overflows on its way is far away
-        scale = abs(float(law.ppf(0.9)) - float(law.ppf(0.1))) or reach
-        cuts = [c for c in (0.0, scale, 8.0 * scale) if c < reach]
+        scale = spread or reach
+        cuts = [c for c in sorted({0.0, scale, 8.0 * scale, *edges}) if c < reach]
         once = twice = 0.0
         for a, b in zip(cuts, [*cuts[1:], reach][: len(cuts)], strict=True):  # none where the median is the end
-            once += quad(lambda d, f=beyond: float(f(d)), a, b, epsabs=0, epsrel=1e-11, limit=200)[0]
-            twice += quad(lambda d, f=beyond: 2.0 * d * float(f(d)), a, b, epsabs=0, epsrel=1e-11, limit=200)[0]
+            once += integral(lambda d, f=beyond: float(f(d)), a, b)
+            twice += integral(lambda d, f=beyond: 2.0 * d * float(f(d)), a, b)
         parts.append((once, twice))
     (up, up2), (down, down2) = parts
     return middle + up - down, up2 + down2 - (up - down) ** 2
+
+
+def integral(f: Callable[[float], float], a: float, b: float) -> float:
+    """∫ f over a stretch of distances where it has no sign but one; if that has no end, over their logarithms.
+
+    There the tails of powers and exponentials fall as fast as others do over distances.
+    """
+    from scipy.integrate import quad
+
+    def over_logarithm(s: float) -> float:
+        d = a * np.exp(min(s, 600.0))
+        height = f(d) if np.isfinite(d) else 0.0
+        return d * height if height > 0.0 else 0.0
+
+    endless = np.isinf(b) and a > 0.0
+    what, ends = (over_logarithm, (0.0, np.inf)) if endless else (f, (a, b))
+    value, error = quad(what, *ends, epsabs=0, epsrel=1e-11, limit=200, full_output=1)[:2]
+    if endless and over_logarithm(200.0) > ROUGH * abs(value):
+        raise Unknown("the tails of its law fall too slowly for its moments to be found, if there are any")
+    if not error <= ROUGH * abs(value) + np.finfo(float).tiny:
+        raise Unknown(f"the quadrature of its law is only known to {error:.1g} of {value:.3g}")
+    return float(value)
 
 
 def _off(distance: float, spacing: float) -> float:
