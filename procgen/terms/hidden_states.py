@@ -73,7 +73,8 @@ class HiddenStates:
         now = np.repeat(self._first[:, None], values.shape[1], axis=1) if state is None else state["now"]
         chances, now = self._followed(np.exp(logs), now)
         lost = np.where(np.isnan(values), np.nan, 0.0)
-        lower, upper = (np.clip(np.einsum("ktp,ktp->tp", chances, part), 0.0, 1.0) + lost for part in (below, upto))
+        mixed = (sum(c * p for c, p in zip(chances, part, strict=True)) for part in (below, upto))
+        lower, upper = (np.clip(part, 0.0, 1.0) + lost for part in mixed)
         return (lower, upper), {"now": now}
 
     def _followed(self, likely: Array, now: Array) -> tuple[Array, Array]:
@@ -83,15 +84,15 @@ class HiddenStates:
         plain = states == len(self._owners)
         own, chances = np.ascontiguousarray(likely.transpose(1, 0, 2)), np.empty((steps, states, paths))
         for t in range(steps):
-            chances[t] = now if plain else whole @ now
+            chances[t] = now if plain else _weighed(whole, now)
             joint = now * (own[t] if plain else own[t][self._owners])
-            total = joint.sum(axis=0)
+            total = _weighed(np.ones((1, len(joint))), joint)[0]
             if total.min() > 0.0:
                 joint /= total
             else:  # a value that is missing, or possible in no state, tells nothing
                 told = total > 0.0
                 joint = np.where(told, joint / np.where(told, total, 1.0), now)
-            now = self._moves.T @ joint
+            now = _weighed(self._moves.T, joint)
         return chances.transpose(1, 0, 2), now
 
     def _laws(self, known: Any) -> list[tuple[Any, Any, Any]]:
@@ -166,6 +167,14 @@ def in_state(node: Any, known: dict[int, Array], states: dict[Any, int]) -> InSt
     if found is None:
         raise Refused(f"{node.name} is not made of its own step alone, and the state that says what is seen is hidden")
     return found
+
+
+def _weighed(weights: Array, rows: Array) -> Array:
+    """Sums of rows by weights, from the first row on: the same bits for any number of paths."""
+    total = weights[:, :1] * rows[0]
+    for k in range(1, len(rows)):
+        total = total + weights[:, k : k + 1] * rows[k]
+    return total
 
 
 def _lumpy(law: Any) -> bool:

@@ -61,7 +61,6 @@ EXEMPT_PLACES = {
     ("terms/inar.py", "_law_after"),
     ("terms/prices.py", "_log_before"),  # of `rank`
     ("terms/hidden_states.py", "__init__"),  # a term that only checks ask
-    ("terms/hidden_states.py", "_followed"),
     ("terms/hidden_states.py", "_law"),
     ("terms/hidden_states.py", "_law_of"),
     ("terms/hidden_states.py", "_functions"),
