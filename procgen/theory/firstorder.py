@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 from procgen.theory.perpetuity import Perpetuity, settled
 from procgen.theory.unknown import Unknown
 
-OF_TYPICAL = 4.0  # of the harmonic mean variance: the square whose size is 1/2, where clustering shows most clearly
+OF_TYPICAL = 1.0  # of the harmonic mean variance: the square whose size is 1/2; with more, products are more skewed
 PLACES = (0.1, 0.5, 1.0, 2.0, 4.0)  # in typical standard deviations, where the law must have settled
 LEAST = 1e-12  # of the law on either side: what lies farther out goes on as a power, which it nears
 REACH, CELLS = 40.0, 2048  # of the table of the law: where the size of a value is sinh of its place; its cells
