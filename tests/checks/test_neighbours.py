@@ -32,16 +32,13 @@ def test_independent_values_are_found_be_they_normal_or_of_the_right_law():
 
 
 def test_true_paths_depart_no_more_often_than_stated():
-    departed = 0
-    for seed in range(100):
-        rows = [row for row in judged(gathered(plan_of(SMALL), [(0, 0, draw(spec_of(body(), 120, 20, seed)))]))]
+    departed, plan = 0, plan_of(spec_of(body(), 120, 20, 1))
+    for seed in range(60):
+        rows = [row for row in judged(gathered(plan, [(0, 0, draw(spec_of(body(), 120, 20, seed)))]))]
         mine = [row for row in rows if row.what == "covariance of bounded sizes"]
         assert len(mine) == 3
         departed += Verdict(mine, 0.05).agrees is False
-    assert departed <= stats.binom.isf(2e-7, 100, 0.05)  # 19
-
-
-SMALL = spec_of(body(), 120, 20, 1)
+    assert departed <= stats.binom.isf(2e-7, 60, 0.05)
 
 
 def test_sums_are_those_of_a_loop_however_the_steps_are_cut():
