@@ -178,7 +178,8 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
     pairs = {(a.series, b.series): expected(a, b, th.axis.space) for a, b in list(combinations(ways, 2))[:PAIR_LIMIT]}
     unseen = [name for name, way in routes.items() if isinstance(way, Cannot) or way.scores is None]
     grains = {plan.name: plan.grain for plan in series}
-    squares = {name: found for name in unseen if (found := plan_squares(th[name], steps, grains[name])) is not None}
+    found = {name: plan_squares(th[name], steps, grains[name]) for name in unseen}
+    squares: dict[str, Any] = {name: each for name, each in found.items() if each is not None}
     for plan in series:
         if not plan.unknown and (short := plan_neighbours(th[plan.name], steps, plan.grain)) is not None:
             squares[plan.name] = short

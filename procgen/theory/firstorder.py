@@ -172,7 +172,7 @@ class Tail:
     """What lies beyond a size x >= 0 on one side: the logarithm of its chance in places s with x = unit sinh(s)."""
 
     def __init__(self, chance: Any, density: Any, unit: float):
-        s = np.linspace(0.0, REACH, CELLS + 1)
+        s: NDArray = np.linspace(0.0, REACH, CELLS + 1)
         beyond = int(np.argmax(chance(unit * np.sinh(s)) < LEAST)) or CELLS
         self.unit, self.width = unit, float(s[beyond]) / CELLS
         s = self.width * np.arange(CELLS + 1)

@@ -62,11 +62,11 @@ class Garch(FirstOrder):
         return float(sum(self.alpha) + sum(self.beta))
 
     @property
-    def started(self) -> bool:
+    def started(self) -> bool:  # type: ignore[override]
         return self.past_variances is not None
 
     @property
-    def variance(self) -> float:
+    def variance(self) -> float:  # type: ignore[override]
         """omega / (1 - sum alpha - sum beta), inf where that is not above 0 (Bollerslev 1986, theorem 1)."""
         return self.omega / (1.0 - self.total) if self.total < 1.0 else np.inf
 
