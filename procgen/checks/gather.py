@@ -15,12 +15,13 @@ from numpy.typing import NDArray
 
 from procgen.checks import missing, waves
 from procgen.checks.errors import ErrorSums
+from procgen.checks.neighbours import Neighbours
 from procgen.checks.probes import CrossPlan, SeriesPlan
 from procgen.checks.recover import Cannot, Expected, Route, dither
 from procgen.checks.relations import Relation
 from procgen.checks.shocks import FAR, MEMORY_LAGS, NEAR, SHOCK_ARRAYS, CrossSums, ShockSums
 from procgen.checks.special import EventSums
-from procgen.checks.squares import Squares, SquareSums
+from procgen.checks.squares import Squares
 from procgen.checks.start import comparable, differences, told_apart
 from procgen.checks.structure import Precision, Structure
 from procgen.checks.sums import Kept, Moments, Powers
@@ -38,7 +39,7 @@ class Plan:
     cross: Sequence[CrossPlan]
     routes: Mapping[str, Route | Cannot]
     shock_pairs: Mapping[tuple[str, str], Expected]
-    squares: Mapping[str, Squares] = field(default_factory=dict)
+    squares: dict[str, Squares | Neighbours] = field(default_factory=dict)
     gaps: dict[str, Any] = field(default_factory=dict)  # series -> the term that leaves values out
     noise: dict[str, float] = field(default_factory=dict)  # series -> variance that rounding adds to a shock
     relations: Sequence[Relation] = ()
@@ -144,7 +145,7 @@ class Gather:
         self.errors = {name: ErrorSums() for name in self.routes if name not in scores}
         self.events = {name: EventSums(way.watched) for name, way in self.routes.items() if way.watched}
         self.events |= missing.sums(plan.gaps)
-        self.squares = {name: SquareSums(each) for name, each in plan.squares.items()}
+        self.squares = {name: each.sums() for name, each in plan.squares.items()}
         few = len(plan.shock_pairs) <= FEW_PAIRS
         self.cross = {pair: sums_of(stated, few) for pair, stated in plan.shock_pairs.items()}
 

@@ -126,7 +126,7 @@ class Lane:
         if column in self.early:
             self.early[column].absorb(x, self.step)
         if plan.name in sums.squares:
-            sums.squares[plan.name].absorb(x, self.step, self.squares[plan.name])
+            sums.squares[plan.name].absorb(x, self.step, self.squares[plan.name])  # type: ignore[arg-type]
         route = sums.routes.get(plan.name)
         if route is not None:
             z, self.carriers[plan.name] = route.tile(x, self.carriers[plan.name], self.first_path, self.step)

@@ -46,6 +46,9 @@ class Squares:
     steps: int
     logs: LogSizes | None = None  # a sharper look, where theory knows what it shows
 
+    def sums(self) -> SquareSums:
+        return SquareSums(self)
+
 
 def plan_squares(theory: Any, steps: int, grain: float = 0.0) -> Squares | None:
     """The squares of a series with the same covariances at all steps, where they are known; else None."""

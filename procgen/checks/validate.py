@@ -22,6 +22,7 @@ from procgen.checks.gather import Gather, Plan
 from procgen.checks.judge_moments import cross_moments, moment_checks
 from procgen.checks.judge_shocks import cross_checks, shock_checks
 from procgen.checks.lane import in_one_process
+from procgen.checks.neighbours import plan_neighbours
 from procgen.checks.probes import PAIR_LIMIT, SeriesPlan, plan_cross, plan_series
 from procgen.checks.recover import Cannot, Expected, Route, expected, route
 from procgen.checks.relations import plan_relations
@@ -180,7 +181,11 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
     pairs = {pair: stated for pair, stated in pairs.items() if not (stated.unknown and hidden & {*pair})}
     unseen = [name for name, way in routes.items() if _unseen(way)]
     grains = {plan.name: plan.grain for plan in series}
-    squares = {name: found for name in unseen if (found := plan_squares(th[name], steps, grains[name])) is not None}
+    found = {name: plan_squares(th[name], steps, grains[name]) for name in unseen}
+    squares: dict[str, Any] = {name: each for name, each in found.items() if each is not None}
+    for plan in series:
+        if not plan.unknown and (short := plan_neighbours(th[plan.name], steps, plan.grain)) is not None:
+            squares[plan.name] = short
     whole = Plan(steps, series, precision, plan_cross(series, th.cross), routes, pairs, squares, gaps)
     apart = [p for p in combinations(routes, 2) if p not in pairs and not gaps.keys() & set(p)]
     whole.relations = plan_relations(graph, th, steps, grains, apart)

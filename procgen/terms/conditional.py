@@ -14,6 +14,8 @@ from procgen.terms.burnt import BURN_TILE, burnt
 from procgen.terms.rows import each_path, row_in
 from procgen.terms.start import decay_lengths
 
+# What is left of an unknown first variance where recovered shocks begin, as a share. Shocks of few values are told
+# apart to 1e-6 of their size, and a first variance may be hundreds of times the next: 1e-7 would be too much.
 FORGOTTEN = 1e-9
 OMEGA = Parameter("omega", "ω", Real(above=0), "the constant in the variance", default=None, unit="series²")
 SD = Parameter(

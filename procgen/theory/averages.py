@@ -19,7 +19,7 @@ WHOLE = 1e-10
 
 def average(law: Any, f: Callable[[np.ndarray], np.ndarray]) -> float:
     """E f(z) for an f of arrays, inf where it is too large."""
-    z, weights = _rule(law)
+    z, weights = nodes_of(law)
     if abs(weights.sum() - 1.0) > WHOLE:  # an end that is too steep, or no density: its own quadrature
         return float(law.expect(lambda v: float(f(np.array(v)))))
     with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
@@ -28,8 +28,8 @@ def average(law: Any, f: Callable[[np.ndarray], np.ndarray]) -> float:
 
 
 @lru_cache(maxsize=64)
-def _rule(law: Any) -> tuple[np.ndarray, np.ndarray]:
-    """Nodes and weights, which hold the density and add up to 1."""
+def nodes_of(law: Any) -> tuple[np.ndarray, np.ndarray]:
+    """Nodes and weights, which hold the density and add up to 1; of a law without one, a weight of 0."""
     distribution = law.distribution()
     if hasattr(distribution, "pmf"):
         return np.zeros(1), np.zeros(1)

@@ -24,6 +24,7 @@ import numpy as np
 
 from procgen.theory.arma import companion, cross_covariance
 from procgen.theory.averages import average
+from procgen.theory.firstorder import FirstOrder
 from procgen.theory.powers import existing_orders
 from procgen.theory.recursion import recursed
 from procgen.theory.transient import Moving, kept_products
@@ -34,7 +35,7 @@ SETTLED = 1e-16
 
 
 @dataclass(frozen=True)
-class Garch:
+class Garch(FirstOrder):
     """The parameters of a garch and what follows from them; `past_*` are oldest first, when it starts from them."""
 
     law: Any
@@ -43,6 +44,13 @@ class Garch:
     beta: tuple[float, ...] = ()
     past_variances: tuple[float, ...] | None = None
     past_squares: tuple[float, ...] = ()
+
+    @property
+    def feedback(self) -> tuple[float, float, float] | None:
+        """alpha, 0 and beta at order (1,1) and for arch(1)."""
+        if len(self.alpha) != 1 or len(self.beta) > 1:
+            return None
+        return self.alpha[0], 0.0, self.beta[0] if self.beta else 0.0
 
     @property
     def persistence(self) -> tuple[float, ...]:
@@ -54,11 +62,11 @@ class Garch:
         return float(sum(self.alpha) + sum(self.beta))
 
     @property
-    def started(self) -> bool:
+    def started(self) -> bool:  # type: ignore[override]
         return self.past_variances is not None
 
     @property
-    def variance(self) -> float:
+    def variance(self) -> float:  # type: ignore[override]
         """omega / (1 - sum alpha - sum beta), inf where that is not above 0 (Bollerslev 1986, theorem 1)."""
         return self.omega / (1.0 - self.total) if self.total < 1.0 else np.inf
 
@@ -101,9 +109,9 @@ class Garch:
     @cached_property
     def exponent(self) -> float | None:
         """E log(beta + alpha z^2) at order (1,1) and for arch(1); None at higher orders."""
-        if len(self.alpha) != 1 or len(self.beta) > 1:
+        if self.feedback is None:
             return None
-        a, b = self.alpha[0], self.beta[0] if self.beta else 0.0
+        a, _, b = self.feedback
         return average(self.law, lambda z: np.log(b + a * z * z))
 
     @property
@@ -139,8 +147,8 @@ class Garch:
         law = float(self.law.highest_moment)
         if not any(self.alpha):
             return law, law
-        if len(self.alpha) == 1 and len(self.beta) <= 1:
-            a, b = self.alpha[0], self.beta[0] if self.beta else 0.0
+        if self.feedback is not None:
+            a, _, b = self.feedback
             index = min(tail_index(self.law, lambda z: b + a * z * z), law)
             return index, index if index < 2.0 * HIGHEST else law
         if self.total >= 1.0:  # at 1 the growth of E h^s is 0 at s = 0 and s = 1, and below 0 between

@@ -14,6 +14,7 @@ import numpy as np
 
 from procgen.theory.averages import average
 from procgen.theory.copula import is_symmetric
+from procgen.theory.firstorder import FirstOrder
 from procgen.theory.garch import HIGHEST, tail_index
 from procgen.theory.processes import Process, Steps
 from procgen.theory.sources import Source
@@ -102,7 +103,7 @@ class ConditionalVariance(Process):
 
 
 @dataclass(frozen=True)
-class Gjr(Volatility):
+class Gjr(FirstOrder, Volatility):
     """h(t+1) = omega + c(z(t)) h(t), c = beta + (alpha + gamma I(z < 0)) z^2, with `first` = h(0) where it is given.
 
     Glosten, Jagannathan & Runkle (1993), J. Finance 48; moments: He & Terasvirta (1999), J. Econometrics 92, 173-192.
@@ -114,6 +115,10 @@ class Gjr(Volatility):
     gamma: float
     beta: float
     first: float | None = None
+
+    @property
+    def feedback(self) -> tuple[float, float, float]:
+        return self.alpha, self.gamma, self.beta
 
     @property
     def started(self) -> bool:  # type: ignore[override]

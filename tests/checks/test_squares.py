@@ -48,7 +48,7 @@ def test_stays_half_as_long_are_called_clustering():
 
 
 def test_series_whose_shocks_say_it_need_no_squares():
-    assert plan_of(spec_of([{"garch": {"sd": 1, "alpha": 0.1, "beta": 0.8}}], 8, 60, 1)).squares == {}
+    assert plan_of(spec_of([{"garch": {"sd": 1, "alpha": 0.1, "beta": 0.8}}], 8, 200, 1)).squares == {}
 
 
 def spreads(stages):
