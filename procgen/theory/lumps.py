@@ -7,7 +7,7 @@ ascending order, and `chance(x)`, that of x. `pdf` is the density of the rest.
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from functools import cached_property
+from functools import cached_property, partial
 from typing import Any
 
 import numpy as np
@@ -328,11 +328,19 @@ def moments(law: Any) -> tuple[float, float]:
         cuts = [c for c in sorted({0.0, scale, 8.0 * scale, *edges}) if c < reach]
         once = twice = 0.0
         for a, b in zip(cuts, [*cuts[1:], reach][: len(cuts)], strict=True):  # none where the median is the end
-            once += integral(lambda d, f=beyond: float(f(d)), a, b)
-            twice += integral(lambda d, f=beyond: 2.0 * d * float(f(d)), a, b)
+            once += integral(partial(_beyond, beyond), a, b)
+            twice += 2.0 * integral(partial(_farther, beyond), a, b)
         parts.append((once, twice))
     (up, up2), (down, down2) = parts
     return middle + up - down, up2 + down2 - (up - down) ** 2
+
+
+def _beyond(chance: Callable[[float], Any], d: float) -> float:
+    return float(chance(d))
+
+
+def _farther(chance: Callable[[float], Any], d: float) -> float:
+    return d * float(chance(d))
 
 
 def integral(f: Callable[[float], float], a: float, b: float) -> float:

@@ -32,9 +32,9 @@ def test_independent_values_are_found_be_they_normal_or_of_the_right_law():
 
 
 def test_true_paths_depart_no_more_often_than_stated():
-    departed, plan = 0, plan_of(spec_of(body(), 120, 20, 1))
+    departed, plan = 0, plan_of(spec_of(body(), 500, 20, 1))
     for seed in range(60):
-        rows = [row for row in judged(gathered(plan, [(0, 0, draw(spec_of(body(), 120, 20, seed)))]))]
+        rows = [row for row in judged(gathered(plan, [(0, 0, draw(spec_of(body(), 500, 20, seed)))]))]
         mine = [row for row in rows if row.what == "covariance of bounded sizes"]
         assert len(mine) == 3
         departed += Verdict(mine, 0.05).agrees is False
