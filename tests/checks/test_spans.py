@@ -16,7 +16,10 @@ from procgen.terms.given import spec_of
 HEAD = "procgen: 1\nseed: 1\npaths: {paths}\ntime: {{steps: {steps}}}\nseries:\n  x: [{term}]\n"
 ROUNDED = "{round: {of: [{ar: {phi: PHI, total_sd: 2}}], to: 0.5}}"
 COUNTS = "{poisson: {mean: 4, of: [{ar: {phi: 0.9, total_sd: 0.4}}]}}"
-STORMS = "{switching_noise: {sd: {calm: 1, storm: 4}, durations: {calm: 40, storm: 8}}}"
+REGIMES = (
+    "{regimes: {branches: {calm: [{ar: {phi: 0.8, sd: 1}}], storm: [{white_noise: {sd: 4}}]}, "
+    "durations: {calm: 40, storm: 8}}}"
+)
 
 
 def spec(folder, term, steps=20_000, paths=1):
@@ -60,7 +63,7 @@ def test_spans_in_parts_on_disk_are_those_in_memory(tmp_path):
     [
         (ROUNDED.replace("PHI", "0.8"), ROUNDED.replace("PHI", "0.6"), "memory"),
         (COUNTS, "{poisson: {mean: 4.333}}", "spread"),
-        (STORMS, STORMS.replace("storm: 4", "storm: 8"), "spread"),
+        (REGIMES, REGIMES.replace("sd: 4", "sd: 8"), "spread"),
     ],
     ids=["weaker memory", "no body", "larger storms"],
 )
