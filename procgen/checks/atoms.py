@@ -9,9 +9,11 @@ from typing import Any
 import numpy as np
 
 from procgen.checks.probes import probe_steps
+from procgen.terms.graph import Source
 
 # Kinds that can hold a value where it is, or switch off what moves it.
 _HOLDING = frozenset({"clip", "hinge", "min", "max", "flag", "chain", "regimes", "switching_noise"})
+_RESTING = frozenset({"intermittent", "zero_inflated", "compound_poisson"})  # kinds whose draws show now and then
 
 
 _FAR = 7.0  # standard deviations that a body without a law may be off its mean
@@ -65,7 +67,11 @@ def may_stay(theory: Any, graph: Any, name: str, flat: frozenset[str] = frozense
     """
     from procgen.theory.sources import OPAQUE, PROCESS
 
-    kinds = {node.term.kind for node in graph.order([graph.series[name]]) if getattr(node, "term", None)}
+    nodes = [node for node in graph.order([graph.series[name]]) if getattr(node, "term", None)]
+    kinds = {node.term.kind for node in nodes}
+    drawing = {node.term.kind for node in nodes if any(isinstance(part, Source) for part in node.inputs)}
+    if drawing and drawing <= _RESTING:
+        return True
     if not (kinds & _HOLDING or flat):
         return False
     sources = theory.expression.linear.sources

@@ -333,6 +333,9 @@ def _chance_of_equal(series: SeriesPlan, plan: Plan) -> float:
         return 1.0
     if series.may_stay:
         return 1.0
+    step = plan.precision[plan.names.index(series.name)].possible.support.step
+    if step and not series.grain:
+        return _equal_on_lattice(series, step, plan.steps)
     if not np.isfinite(series.variance).all():
         return 0.0
     moving = int(np.count_nonzero(series.drawn > 0))
@@ -345,6 +348,18 @@ def _chance_of_equal(series: SeriesPlan, plan: Plan) -> float:
         moving = plan.steps - 1 if moving < len(series.steps) else plan.steps
     # Two normals of this sd fall in one cell with probability grain / (2 sqrt(pi) sd).
     return min(1.0, series.grain / (2 * math.sqrt(math.pi) * sd)) ** max(moving, 1) if sd else 1.0
+
+
+def _equal_on_lattice(series: SeriesPlan, step: float, steps: int) -> float:
+    """The same of values that a term has put on a lattice, by what is new in each since the step before it.
+
+    Where theory does not know that, or it is small beside the lattice, equal paths are no wonder.
+    """
+    neighbours = [(i, j, cov) for (i, j), cov in series.covariance.items() if series.steps[j] == series.steps[i] + 1]
+    if not neighbours or not np.all(series.variance > 0) or any(cov is None for _, _, cov in neighbours):
+        return 1.0
+    new = min(float(series.variance[j]) - (cov or 0.0) ** 2 / float(series.variance[i]) for i, j, cov in neighbours)
+    return min(1.0, step / (2 * math.sqrt(math.pi * new))) ** steps if new > 0 else 1.0
 
 
 def read_spec(spec: Any) -> Any:

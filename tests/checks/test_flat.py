@@ -47,6 +47,18 @@ def test_what_is_held_by_a_bend_without_moments_does_not_depart():
     assert pg.validate(pg.render(spec(HELD))).agrees is None
 
 
+PRICE = {"merton": {"drift": 0.001, "sd": 0.01, "rate": 0.02, "jump_mean": -0.02, "jump_sd": 0.05, "start": 100}}
+RARE = {"intermittent": {"share": 0.2, "stay": 3, "size": 12, "sd": 6}}
+
+
+@pytest.mark.parametrize("of", [{"floor": {"of": [PRICE], "to": 20}}, {"difference": {"of": [RARE], "by": 4}}])
+def test_paths_that_are_equal_now_and_then_are_no_copies(of):
+    """Prices in steps far wider than they move, and demand that comes so seldom that two paths may have none."""
+    one = spec([of], paths=600)
+    assert len(np.unique(pg.render(one)["x"], axis=0)) < 600
+    assert "departs" not in pg.validate(pg.render(one)).counts
+
+
 @pytest.mark.parametrize("of", [{"exp": body(1, -300)}, {"sigmoid": body(1, 20)}, {"sigmoid": body(1, -40)}])
 def test_what_is_not_flat_is_judged_and_its_copies_are_found(of):
     one = spec([of])
