@@ -163,7 +163,8 @@ class Marginal:
         x = np.array(atoms_of(self.frozen))
         if 0.0 < spacing < np.inf:  # inf: that of parts differs
             first, last = (float(self.frozen.ppf(p)) for p in (_LEAST, 1.0 - _LEAST))
-            x = first + spacing * np.arange(round((last - first) / spacing) + 1.0)
+            count = (last - first) / spacing + 1.0
+            x = first + spacing * np.arange(round(count)) if count <= _VALUES else np.zeros(0)
         if not 0 < len(x) <= _VALUES:
             return np.zeros(0), np.zeros(0)
         return (x - self.mean) / self.sd, np.asarray(chance_of(self.frozen, x), float)

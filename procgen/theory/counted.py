@@ -10,21 +10,31 @@ import numpy as np
 
 NODES = 120
 NOTHING = 1e-18
+LISTED = 1 << 20  # chances of counts at nodes up to which they are kept in a table
+FELT = 1e-8  # weight of a node from which on its step counts
+FINE = 0.8  # most steps between nodes in standard deviations of the law: the rule errs by exp(-2 pi² / FINE²), 4e-14
+MOST = 2_000  # nodes: a cdf over what is wider is off by some 6e-5
+AT_ONCE = 1 << 19  # chances
+FARTHEST = 2.0**52  # whole numbers are no longer exact beyond
 ROUNDING = 1e-12
+LARGEST = 0.1 / ROUNDING  # mean about which whole numbers are still told apart
 
 
 class Centred:
-    """A law less its mean; `spacing` is the distance of neighbouring values where only such have a chance, else 0."""
+    """A law less its mean; `spacing` is the distance of neighbouring values where only such have a chance, else 0.
 
-    def __init__(self, law: Any):
-        self.law, self.base = law, float(law.mean())
+    `mean` is given where the law's own leaves out what is too rare for its nodes.
+    """
+
+    def __init__(self, law: Any, mean: float | None = None):
+        self.law, self.base = law, float(law.mean()) if mean is None else mean
         self.spacing = 1.0 if hasattr(law, "pmf") else 0.0
 
     def _with_mean(self, x):
         """Values with the mean added again; whole numbers are whole once more, or their chance would be missed."""
         x = np.asarray(x, float) + self.base
-        near = np.rint(x)
-        return np.where(np.abs(x - near) <= ROUNDING * np.maximum(np.abs(x), 1.0), near, x) if self.spacing else x
+        near, size = np.rint(x), np.maximum(np.abs(x), max(abs(self.base), 1.0))
+        return np.where(np.abs(x - near) <= ROUNDING * size, near, x) if self.spacing else x
 
     def cdf(self, x):
         return self.law.cdf(self._with_mean(x))
@@ -79,27 +89,34 @@ class Inflated:
         return (1.0 - self.share) * (float(self.law.var()) + self.share * float(self.law.mean()) ** 2)
 
 
+def _nodes(of: Any, count: int) -> tuple[np.ndarray, np.ndarray]:
+    """Weights of equal steps of a normal number, and the quantiles of a law there."""
+    from scipy.stats import norm
+
+    z = np.linspace(-8.3, 8.3, count)
+    weights = np.exp(-z * z / 2.0)
+    return weights / weights.sum(), np.where(z < 0, of.ppf(norm.cdf(z)), of.isf(norm.sf(z)))
+
+
 class Compound:
     """Whole numbers whose parameter is itself drawn from a continuous law: by an average over its quantiles.
 
     The parameter's ranks are mapped to normals, where a rule with equal steps is exact to rounding for what is smooth.
+    A law whose own spread is small beside the step from one node to the next is not: it gets more of them.
     """
 
     def __init__(self, law: Callable[[Any], Any], of: Any):
-        from scipy.stats import norm
-
-        z = np.linspace(-8.3, 8.3, NODES)
-        weights = np.exp(-z * z / 2.0)
-        self.weights = weights / weights.sum()
-        at = np.where(z < 0, of.ppf(norm.cdf(z)), of.isf(norm.sf(z)))
+        self.weights, at = _nodes(of, NODES)
+        apart = np.diff(at) / np.maximum(np.ravel(law(at[1:, None]).std()), 1e-300)
+        most = float(np.max(apart[self.weights[1:] > FELT], initial=0.0))
+        if most > FINE:
+            self.weights, at = _nodes(of, min(int(NODES * most / FINE) + 1, MOST))
         self.laws = law(at[:, None])  # one for each node, a row each
 
     def _averaged(self, name: str, x: Any) -> np.ndarray:
         x = np.asarray(x, float)
-        rows = np.concatenate(
-            [getattr(self.laws, name)(part).T for part in np.array_split(x.ravel(), 1 + x.size // 4096)]
-        )
-        return (rows @ self.weights).reshape(x.shape)
+        parts = np.array_split(x.ravel(), 1 + x.size * len(self.weights) // AT_ONCE)
+        return np.concatenate([getattr(self.laws, name)(part).T @ self.weights for part in parts]).reshape(x.shape)
 
     def pmf(self, x):
         return self._averaged("pmf", x)
@@ -111,22 +128,38 @@ class Compound:
         return self._averaged("sf", x)
 
     @cached_property
-    def _counts(self) -> np.ndarray:
-        """All that have a chance worth a look."""
-        top = 64
-        while float(self.sf(top)) > NOTHING:
+    def _top(self) -> float:
+        """A count beyond which nothing has a chance worth a look, a power of 2."""
+        top = 64.0
+        while top < FARTHEST and float(self.sf(top)) > NOTHING:
             top *= 2
-        return np.arange(top + 1.0)
+        return top
 
     @cached_property
     def _tables(self) -> tuple[np.ndarray, np.ndarray]:
-        return self.cdf(self._counts), -self.sf(self._counts)
+        counts = np.arange(self._top + 1.0)
+        return self.cdf(counts), -self.sf(counts)
 
     def ppf(self, p):
-        return np.searchsorted(self._tables[0], np.asarray(p, float)).astype(float)
+        p = np.asarray(p, float)
+        if self._top * len(self.weights) <= LISTED:
+            return np.searchsorted(self._tables[0], p).astype(float)
+        return self._first(lambda k: self.cdf(k) >= p, p.shape)
 
     def isf(self, p):
-        return np.searchsorted(self._tables[1], -np.asarray(p, float)).astype(float)
+        p = np.asarray(p, float)
+        if self._top * len(self.weights) <= LISTED:
+            return np.searchsorted(self._tables[1], -p).astype(float)
+        return self._first(lambda k: self.sf(k) <= p, p.shape)
+
+    def _first(self, enough: Callable[[np.ndarray], np.ndarray], shape: tuple[int, ...]) -> np.ndarray:
+        """The least count of which `enough` is true, by halving; what lies beyond the last is put there."""
+        below, reached = np.full(shape, -1.0), np.full(shape, self._top)
+        while np.any(reached - below > 1.0):
+            middle = np.floor(0.5 * (below + reached))
+            true = enough(middle)
+            below, reached = np.where(true, below, middle), np.where(true, middle, reached)
+        return reached
 
     def mean(self) -> float:
         return float(self.weights @ np.ravel(self.laws.mean()))

@@ -11,7 +11,7 @@ import numpy as np
 
 from procgen.theory import known, markov
 from procgen.theory.bootstrap import Blocks
-from procgen.theory.counted import Centred, Compound, Inflated
+from procgen.theory.counted import LARGEST, Centred, Compound, Inflated
 from procgen.theory.elapsed import Pulled, forecast
 from procgen.theory.expression import Expression, product
 from procgen.theory.known import Known
@@ -188,7 +188,10 @@ class Drawn(Process):
             return less(law, law.mean()) if atoms_of(law) else Centred(law)
         if not self.discrete:
             return super().marginal(step)
-        return Centred(Compound(self.law, marginal(self.body, step)))
+        mean = float(mean_at(self.level, at)[0])
+        if not mean < LARGEST:
+            raise Unknown(f"its mean is {mean:.3g}: less that, one count is no longer told from the next")
+        return Centred(Compound(self.law, marginal(self.body, step)), mean)
 
 
 class Stating:

@@ -9,6 +9,7 @@ import numpy as np
 import pytest
 from scipy import stats
 
+import procgen as pg
 from procgen.theory import theory
 
 from ..terms.helpers import draw, graph_of, jacobian
@@ -229,3 +230,23 @@ def test_jumps_and_their_number_go_together(law):
         assert cross.covariance(at, np.array([4, 4])) == pytest.approx([expected, 0.0], abs=1e-14)
     spread = rate * (m**2 + sd**2) + rate + 2 * expected
     assert known["c"].variance(at) == pytest.approx([spread] * 2, rel=1e-12)
+
+
+@pytest.mark.parametrize(("mean", "sd", "off"), [(1000, 0.5, 1e-11), (10_000, 1.0, 1e-5), (2, 4.6, 1e-4)])
+def test_counts_over_a_mean_that_is_wide_beside_their_own_spread(mean, sd, off):
+    """Poisson numbers over a lognormal mean: SciPy's distribution function, averaged over 200,001 normals."""
+    head = {"procgen": 1, "seed": 3, "paths": 2000, "time": {"steps": 3}}
+    spec = head | {"series": {"x": [{"poisson": {"mean": mean, "of": [{"white_noise": {"sd": sd}}]}}]}}
+    law, z = pg.theory(spec)["x"].marginal(1), np.linspace(-9, 9, 200_001)
+    weights = stats.norm.pdf(z) * (z[1] - z[0])
+
+    def cdf(k):
+        return float(weights @ stats.poisson.cdf(k, mean * np.exp(sd * z)))
+
+    for k in np.round(mean * np.exp(sd * np.linspace(-2, 2, 7))):
+        assert float(law.cdf(k + 0.5)) == pytest.approx(cdf(k), abs=off)
+    for p in (0.3, 0.5, 0.9, 0.99):
+        count = float(law.ppf(p))
+        assert count == pytest.approx(round(count), abs=1e-6)
+        assert cdf(round(count)) > p - off and cdf(round(count) - 1) < p + off
+    assert pg.validate(pg.render(spec), false_alarm=1e-8).agrees is not False
