@@ -42,7 +42,6 @@ class Coverage:
         """Whether its spread may be anything. A revealed term (its name has a dot) is a part, and hides nothing."""
         return not self.still and "spread" in self.missing and "." not in self.series
 
-
     def to_dict(self) -> dict[str, Any]:
         """Plain data; where there is no chance in a series its values were compared, and nothing is left."""
         return {

@@ -58,3 +58,21 @@ def limit(
     if kind == "spread":
         finding = judge.of_scale(finding)
     return Check.of(plan.name, what, probe, kind, finding)
+
+
+def clustering(
+    series: str,
+    what: str,
+    probe: str,
+    powers: Powers,
+    k: int,
+    theory: float,
+    least: int = FEW_PATHS,
+    times: float = 1.0,
+) -> Check:
+    """A check of clustering by averages along paths, of which there must be `least`; `times` as for `sample_mean`."""
+    sample = sample_of(powers, k)
+    if sample.n < least or sample.sd == 0.0:
+        estimate, note = theory + sample.mean, few_paths(sample.n, least)
+        return Check(series, what, probe, "clustering", theory, estimate, outcome="reported", note=note)
+    return Check.of(series, what, probe, "clustering", judge.sample_mean(sample, theory, times=times))

@@ -16,12 +16,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.checks.blocks import Window, add_lagged
-from procgen.checks.judge import FEW_PATHS, Sample, sample_mean
-from procgen.checks.limits import few_paths
+from procgen.checks.limits import clustering
 from procgen.checks.sums import Powers
 from procgen.checks.verdict import Check
 
 _MEAN, _VARIANCE = -(np.euler_gamma + math.log(2.0)) / 2.0, math.pi**2 / 8.0  # of log(abs(z)), z normal
+_LEVERAGE = "leverage: sign times next log size"
 _FINE = 1e-6  # share of the standard deviation up to which rounding leaves the smallest sizes as they are
 
 
@@ -98,13 +98,5 @@ class LogSums:
         """The slope of the logarithms at each lag, and the leverage."""
         plan = self.plan
         for k, (lag, slope) in enumerate(zip(plan.lags, plan.slopes, strict=True)):
-            yield self._check(series, "slope of log sizes", f"lag {lag}", k, slope)
-        yield self._check(series, "leverage: sign times next log size", "lag 1", len(plan.lags), plan.leverage)
-
-    def _check(self, series: str, what: str, probe: str, k: int, theory: float) -> Check:
-        n = int(self.powers.n[k])
-        sample = Sample.from_powers(n, self.powers.sums[:, k].tolist()) if n else Sample(0, 0.0, 0.0, 0.0, 0.0)
-        if n < FEW_PATHS or sample.sd == 0.0:
-            note = few_paths(n, FEW_PATHS)
-            return Check(series, what, probe, "clustering", theory, theory + sample.mean, outcome="reported", note=note)
-        return Check.of(series, what, probe, "clustering", sample_mean(sample, theory))
+            yield clustering(series, "slope of log sizes", f"lag {lag}", self.powers, k, slope)
+        yield clustering(series, _LEVERAGE, "lag 1", self.powers, len(plan.lags), plan.leverage)

@@ -16,8 +16,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.checks.blocks import Window, add_lagged
-from procgen.checks.judge import FEW_PATHS, Sample, sample_mean
-from procgen.checks.limits import few_paths
+from procgen.checks.judge import FEW_PATHS
+from procgen.checks.limits import clustering
 from procgen.checks.sums import Powers
 from procgen.checks.verdict import Check
 from procgen.terms.conditional import FORGOTTEN
@@ -25,6 +25,7 @@ from procgen.theory.firstorder import FirstOrder, Sizes
 from procgen.theory.linear import At
 from procgen.theory.unknown import Unknown
 
+_WHAT = "covariance of bounded sizes"
 LAGS = (1, 2, 5, 10, 20)  # up to a quarter of the steps
 _SHORTEST = 8  # steps
 _FEW = 5 * FEW_PATHS  # of 200 paths of 20 steps those that show little skewness were seen to depart too often
@@ -116,12 +117,4 @@ class NeighbourSums:
     def checks(self, series: str) -> Iterator[Check]:
         """The covariance of sizes at each lag."""
         for k, (lag, stated) in enumerate(zip(self.plan.lags, self.plan.sizes.covariances, strict=True)):
-            yield self._check(series, "covariance of bounded sizes", f"lag {lag}", k, stated)
-
-    def _check(self, series: str, what: str, probe: str, k: int, theory: float) -> Check:
-        n = int(self.powers.n[k])
-        sample = Sample.from_powers(n, self.powers.sums[:, k].tolist()) if n else Sample(0, 0.0, 0.0, 0.0, 0.0)
-        if n < _FEW or sample.sd == 0.0:
-            note = few_paths(n, _FEW)
-            return Check(series, what, probe, "clustering", theory, theory + sample.mean, outcome="reported", note=note)
-        return Check.of(series, what, probe, "clustering", sample_mean(sample, theory, times=HIDDEN))
+            yield clustering(series, _WHAT, f"lag {lag}", self.powers, k, stated, _FEW, HIDDEN)

@@ -16,8 +16,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.checks.blocks import Window, add_lagged, scratch
-from procgen.checks.judge import FEW_PATHS, Sample, sample_mean
-from procgen.checks.limits import few_paths
+from procgen.checks.judge import FEW_PATHS
+from procgen.checks.limits import clustering, sample_of
 from procgen.checks.log_sizes import LogLane, LogSizes, LogSums, plan_log_sizes
 from procgen.checks.sums import Powers
 from procgen.checks.verdict import Check
@@ -134,12 +134,9 @@ class SquareSums:
             yield from self.logs.checks(series)
 
     def _check(self, series: str, k: int, probe: str) -> Check:
-        what, kind, theory, n = "slope of squares", "clustering", self.plan.slopes[k], int(self.powers.n[k])
-        sample = Sample.from_powers(n, self.powers.sums[:, k].tolist()) if n else Sample(0, 0.0, 0.0, 0.0, 0.0)
+        what, theory, times = "slope of squares", self.plan.slopes[k], hidden(self.plan.steps)
         if not self.plan.highest > 3 * _ORDER:
+            estimate = theory + sample_of(self.powers, k).mean
             note = f"moments exist only below order {self.plan.highest:g}: no central limit theorem reaches far enough"
-            return Check(series, what, probe, kind, theory, theory + sample.mean, outcome="untestable", note=note)
-        if n < _FEW or sample.sd == 0.0:
-            note = few_paths(n, _FEW)
-            return Check(series, what, probe, kind, theory, theory + sample.mean, outcome="reported", note=note)
-        return Check.of(series, what, probe, kind, sample_mean(sample, theory, times=hidden(self.plan.steps)))
+            return Check(series, what, probe, "clustering", theory, estimate, outcome="untestable", note=note)
+        return clustering(series, what, probe, self.powers, k, theory, _FEW, times)

@@ -68,9 +68,9 @@ class Perpetuity:
         """(n,) the same given the variance."""
         return self._of_values(function) @ self.chances
 
-    def products(self, function: Function, lags: tuple[int, ...], first: Function | None = None) -> NDArray:
-        """E of `first` (or the same function) of a value times a bounded function of the one `lag` >= 1 steps later."""
-        before = self.weights @ self._averaged(self._of_values(first or function) * self.chances)
+    def products(self, function: Function, lags: tuple[int, ...]) -> NDArray:
+        """E of a bounded function of a value times the same of the one `lag` >= 1 steps later."""
+        before = self.weights @ self._averaged(self._of_values(function) * self.chances)
         ahead, found = self.given(function), {}
         for lag in range(1, max(lags) + 1):
             found[lag] = float(before @ ahead)

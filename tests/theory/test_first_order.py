@@ -1,4 +1,4 @@
-"""The law of a garch of order (1,1) by quadrature, against closed laws, closed moments and paths drawn by NumPy."""
+"""The variance of a garch of order (1,1) by quadrature, against closed laws and moments, and paths drawn by NumPy."""
 
 import numpy as np
 import pytest
@@ -14,29 +14,33 @@ NORMAL = LAWS["normal"]()
 T = LAWS["student_t"]
 
 
+def beyond(law, model, omega, x):
+    """P(a value lies above x), from the law of the variance at 96 points."""
+    found = perpetuity(law, *model, 96)
+    shock = law.distribution()
+    return shock.sf(np.asarray(x, float)[..., None] / np.sqrt(omega * found.variances)) @ found.weights
+
+
 @pytest.mark.parametrize("df", [3.5, 5.0, 8.0])
 def test_arch_of_t_shocks_has_the_closed_law_of_chamayou_and_letac(df):
     """With alpha = 1 / (n - 2), values are t(n - 1) times sqrt(omega (n - 2) / (n - 1)) (J. Theor. Prob. 4, 1991)."""
-    law = Garch(T(df), 2.0, (1.0 / (df - 2.0),)).value_law
-    exact = stats.t(df - 1.0, scale=np.sqrt(2.0 * (df - 2.0) / (df - 1.0)))
     x = np.array([-50, -3, -1, -0.1, 0, 0.5, 2, 10])
-    np.testing.assert_allclose(law.cdf(x), exact.cdf(x), rtol=1e-7, atol=1e-10)
-    np.testing.assert_allclose(law.sf(x), exact.sf(x), rtol=1e-7, atol=1e-10)
-    np.testing.assert_allclose(law.pdf(x), exact.pdf(x), rtol=1e-6, atol=1e-10)
-    p = np.array([1e-6, 0.01, 0.3, 0.7, 0.99])
-    np.testing.assert_allclose(law.ppf(p), exact.ppf(p), rtol=1e-4)
-    np.testing.assert_allclose(law.isf(p), exact.isf(p), rtol=1e-4)
+    found = beyond(T(df), (1.0 / (df - 2.0), 0.0, 0.0), 2.0, x)
+    exact = stats.t(df - 1.0, scale=np.sqrt(2.0 * (df - 2.0) / (df - 1.0)))
+    np.testing.assert_allclose(found, exact.sf(x), rtol=1e-7, atol=1e-10)
 
 
 def test_variance_and_kurtosis_of_the_law_are_those_of_bollerslev():
-    """Bollerslev (1986), theorems 1 and 2: 3 (1 - s^2) / (1 - s^2 - 2 alpha^2) with s = alpha + beta."""
-    law = Garch(NORMAL, 0.05, (0.1,), (0.85,)).value_law
+    """Bollerslev (1986), theorems 1 and 2: 3 (1 - s^2) / (1 - s^2 - 2 alpha^2) with s = alpha + beta.
+
+    Up to 30 standard deviations, beyond which a tail of order 8 leaves less than 1e-5 of either.
+    """
 
     def moment(k):
-        def part(s):
-            return 2 * k * np.sinh(s) ** (k - 1) * np.cosh(s) * law.sf(np.sinh(s))
+        def part(x):
+            return 2 * k * x ** (k - 1) * beyond(NORMAL, (0.1, 0.0, 0.85), 0.05, x)
 
-        return integrate.quad(part, 0.0, 8.0, limit=500, epsabs=1e-12)[0]
+        return integrate.quad(part, 0.0, 30.0, limit=500, epsabs=1e-12)[0]
 
     assert moment(2) == pytest.approx(1.0, rel=1e-6)
     assert moment(4) == pytest.approx(3 * (1 - 0.95**2) / (1 - 0.95**2 - 2 * 0.1**2), rel=1e-4)
@@ -65,10 +69,8 @@ def test_sizes_of_neighbours_are_those_of_drawn_paths(gamma):
             rows.append(x)
     y = found.of(np.array(rows))
     drawn = [y[0], *((y[0] - found.mean) * (y[lag] - found.mean) for lag in (1, 2, 5))]
-    drawn.append(np.sign(rows[0]) * (y[1] - found.mean))
-    for values, stated in zip(drawn, (found.mean, *found.covariances, found.leverage), strict=True):
+    for values, stated in zip(drawn, (found.mean, *found.covariances), strict=True):
         assert abs(values.mean() - stated) < 5.5 * values.std() / np.sqrt(len(values))
-    assert (found.leverage == 0.0) == (gamma == 0.0)
 
 
 @pytest.mark.parametrize(
@@ -77,10 +79,9 @@ def test_sizes_of_neighbours_are_those_of_drawn_paths(gamma):
         Garch(NORMAL, 1.0, (0.1, 0.1), (0.5,)),
         Garch(NORMAL, 1.0, (0.1,), (0.8,), (1.0,), (1.0,)),
         Garch(NORMAL, 1.0, (4.0,), (0.9,)),
-        Garch(LAWS["uniform"](), 1.0, (0.1,), (0.8,)),
     ],
-    ids=["order", "given start", "not stationary", "ends"],
+    ids=["order", "given start", "not stationary"],
 )
 def test_what_is_not_computed_says_why(process):
     with pytest.raises(Unknown):
-        _ = process.value_law
+        process.sizes((1,))
