@@ -12,7 +12,7 @@ from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING
 
 from procgen.checks.lifted import SCORE, Lifted
-from procgen.checks.words import FARTHEST, FARTHEST_SHOCK, SCATTER, START, is_signed, of_stays, sort_of
+from procgen.checks.words import FARTHEST, FARTHEST_SHOCK, LED, SCATTER, START, is_signed, of_stays, sort_of
 
 if TYPE_CHECKING:
     from procgen.checks.verdict import Check
@@ -25,6 +25,7 @@ _SHAPE = "shocks: shape of the law"
 _PRODUCTS = ("shocks: autocorrelation", "shocks: neighbouring paths", "shocks: correlation between series")
 _SIZES = ("shocks: variance", "shocks: spread score")
 _LIKE = 0.5  # share of the shocks' log variance that the values' must show to be called a matter of spread
+_LED = 0.2  # share of the gain by the law and size of ranks that their memory must have, to be behind these
 _FAR = 1.0  # a shift of the shocks, in their sd, that a bounded score of their spread sees as spread
 
 Groups = list[list["Check"]]
@@ -64,7 +65,7 @@ def _of_series(rows: Sequence[Check], sizes: Mapping[str, float]) -> Groups:
     if stays:  # a series of states is judged by them: all else that is off about it follows
         kinds["memory"] = stays + [row for row in kinds["memory"] if not of_stays(row)]
         return [kinds[kind] for kind in sorted(kinds, key=lambda kind: (kind != FARTHEST, kind != "memory"))]
-    follows = _following(rows, kinds) | _lifted(rows, kinds, sizes)
+    follows = _following(rows, kinds) | _lifted(rows, kinds, sizes) | _led(kinds)
     order = sorted(kinds, key=lambda kind: (kind != FARTHEST, kind in follows, -_gain(kinds[kind][0], sizes)))
     if order:
         behind = _BEHIND.get(order[0], _nothing)(rows, kinds)
@@ -132,6 +133,16 @@ def _lifted(rows: Sequence[Check], kinds: Mapping[str, list[Check]], sizes: Mapp
     return {kind for kind, group in more.items() if group and all(lifted.explains(row) for row in group)}
 
 
+def _led(kinds: Mapping[str, list[Check]]) -> set[str]:
+    """Kinds of ranks alone that a memory explains: where it is off, ranks given the past have other sizes, too."""
+    led = max((-(row.log_p or 0.0) for row in kinds.get("memory", ()) if row.what == LED), default=0.0)
+    return {
+        kind
+        for kind in kinds.keys() & {"law", "spread", "clustering"}
+        if all(row.what.startswith("shocks: ") and _LED * -(row.log_p or 0.0) <= led for row in kinds[kind])
+    }
+
+
 def _nothing(rows: Sequence[Check], kinds: Mapping[str, list[Check]]) -> str | None:
     return None
 
@@ -155,7 +166,7 @@ def _behind_spread(rows: Sequence[Check], kinds: Mapping[str, list[Check]]) -> s
 def _behind_memory(rows: Sequence[Check], kinds: Mapping[str, list[Check]]) -> str | None:
     """Spread, where the slope on earlier steps has changed only because more, or less, of the variance is noise."""
     variance, slope = _moved(rows, "variance over steps"), _moved(rows, "slope over steps")
-    if "spread" not in kinds or variance is None or slope is None or _turned(rows):
+    if "spread" not in kinds or variance is None or slope is None or _turned(rows) or "spread" in _led(kinds):
         return None
     return "spread" if abs(slope + variance) < _LIKE * abs(variance) else None
 

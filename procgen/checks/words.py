@@ -33,6 +33,7 @@ _MORE_LESS = {"level": ("higher than", "lower than"), "spread": ("larger than", 
 _SIGNED = ("mean", "variance", "level score", "spread score")  # how the checks end whose sign says more or less
 BALANCE = "shocks: balance of paths"
 BY_PHASE = "shocks: level by phase"
+LED = "shocks: slope on the value before"
 COSINES, SINES = "mean cosine of values", "mean product of sines of values"
 START, SCATTER = "size of the start", "scatter of the start"
 _BETWEEN_PATHS = ("neighbouring paths", BALANCE)  # how the checks end
