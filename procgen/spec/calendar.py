@@ -128,9 +128,14 @@ class Grid:
         if self.start is None:
             raise ValueError("these steps have no local time: the spec's time has no start")
         steps = np.asarray(steps, np.int64)
-        if self.every is not None and self.every[1] not in ABSOLUTE:
-            return self._local(steps)
-        utc = self._listed(steps) if self.at else steps * self._length + self._utc(self.start)
+        if self.at:
+            utc = self._listed(steps)
+        elif self.every is not None and self.every[1] not in ABSOLUTE:
+            if self.zone is None:
+                return self._local(steps)
+            utc = self._calendar_utc(self._local(steps))  # and back: a day may skip the time at which its step begins
+        else:
+            utc = steps * self._length + self._utc(self.start)
         return utc if self.zone is None else utc + offsets(self.zone, utc)
 
     def last_year(self) -> int:

@@ -150,12 +150,11 @@ class Regimes(Term):
         branches, state = inputs[: len(self.branches)], inputs[-1]
         if self.chain is not None:
             state = axis.states(self.address, markov.UNIFORM, *self.chain.theory)
-        # The first branch, and in state k what branch k differs by: what all have in common is not multiplied.
-        total = branches[0]
-        for k, branch in enumerate(branches[1:], start=1):
-            in_state = state.hidden(f"state {k}") if f"state {k}" in state.outputs else state  # a flag is its own
-            total = total + axis.product([in_state, branch + branches[0] * -1.0])
-        return axis.offering(total, regime=state)
+        flags = [
+            state.hidden(f"state {k}") if f"state {k}" in state.outputs else state  # a flag is its own
+            for k in range(1, len(branches))
+        ]
+        return axis.offering(axis.chosen(list(zip([None, *flags], branches, strict=True))), regime=state)
 
     def equation(self, *inputs):
         shown = ", ".join(f"{x}[t] in {name}" for x, name in zip(inputs, self.branches, strict=False))

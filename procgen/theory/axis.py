@@ -20,7 +20,7 @@ from procgen.theory.known import Known
 from procgen.theory.left import LeftOpen
 from procgen.theory.linear import At, Base, Linear
 from procgen.theory.parallel import ParallelGarch
-from procgen.theory.processes import Chain, Held, Process, Seen, mean_at
+from procgen.theory.processes import Chain, Held, Process, Seen, law_at, mean_at
 from procgen.theory.sources import GARCH, IID, PROCESS, Source, Space, roots
 from procgen.theory.stated import Stating
 from procgen.theory.unknown import Unknown
@@ -139,7 +139,8 @@ class Axis(Volatile, Stating, Bending):
     def chain(self, key: str, law: Any, p: float, r: float) -> Expression:
         """0 or 1 by a stationary chain, driven by the stream `key`: 1 with probability p, autocorrelations r^lag."""
         driver = self.source(key, law, 1.0)
-        return self.process(Chain(key, (driver,), p, r), known.constant(p))
+        flag = self.process(Chain(key, (driver,), p, r), known.constant(p))
+        return replace(flag, branches=lambda: [(None, self.level(0.0)), (flag, self.level(1.0))])
 
     def states(
         self,
@@ -204,8 +205,11 @@ class Axis(Volatile, Stating, Bending):
         note = f"held for {period} steps in {self.name}"
         cycle = frozenset([float(period)])
         says = () if period == 1 else ((CYCLES, note),)
+        if x.lost:
+            held = self.process(Held(self.name, x, step_of, says), lost=x.lost)
+            return replace(held, law=lambda step: law_at(x, int(step_of(np.array([step], np.int64))[0])))
         # A mean that is known as such may lack a past: it is read where the holding reads it, and only there.
-        at = mean_at if x.terms or any(not s.centred for s in x.sources) else _mean_path_at
+        at = mean_at if x.terms else _mean_path_at
         path = known.whole(("held", self.name), lambda t: at(x, step_of(np.asarray(t, np.int64))), cycle, note)
         if x.mean_path.value is not None and not x.terms:
             path = x.mean_path
@@ -233,11 +237,11 @@ class Axis(Volatile, Stating, Bending):
             path = known.constant(float(mean_at(x, np.array([first]))[0]))
         return self.process(Seen(self.name, x, step_of), path) if x.sources else Expression(self.space, path)
 
-    def process(self, process: Process, mean: Known | None = None) -> Expression:
-        """A process with a memory of its own around its mean (0 when absent)."""
+    def process(self, process: Process, mean: Known | None = None, lost: str = "") -> Expression:
+        """A process with a memory of its own around its mean (0 when absent), or why that is `lost`."""
         depends = frozenset(root for x in process.ingredients for source in x.sources for root in roots(source))
         key = f"process {len(self._processes)} of {process.name}"
-        source = Source(key, PROCESS, np.nan, detail=process, depends=depends)
+        source = Source(key, PROCESS, np.nan, detail=process, depends=depends, reason=lost, centred=not lost)
         self._processes.append(source)
         form = Linear({At(self._base(source, (), False), 0): 1.0})
         return Expression(self.space, mean or known.constant(0.0), form, lumpy=process.lumpy or process.discrete)

@@ -7,12 +7,13 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 from dataclasses import replace
+from functools import partial
 from typing import Any
 
 import numpy as np
 
 from procgen.theory import known
-from procgen.theory.expression import Expression, product
+from procgen.theory.expression import Expression, chosen, product
 from procgen.theory.joint import larger_law, product_law
 from procgen.theory.known import Known
 from procgen.theory.lattice import Rounded
@@ -63,6 +64,10 @@ class Bending:
         made = y + self._hinged((x + y * -1.0) * sign) * sign
         return replace(made, law=lambda step: larger_law(x, y, sign, step)) if made.sources else made
 
+    def chosen(self, branches: Sequence[tuple[Expression | None, Expression]]) -> Expression:
+        """What is each of the branches where its flag is 1, and the first, whose flag is None, elsewhere."""
+        return chosen(branches)
+
     def power(self, x: Expression, n: int) -> Expression:
         """x to the whole power n."""
         made = product(x.space, [x] * n)
@@ -102,12 +107,12 @@ class Bending:
     def _hinged(self, x: Expression) -> Expression:
         level = x.mean_path.value
         if level is not None and level > 0.0 and x.sources and not x.terms and is_gaussian(x):
-            return x + self._of_gaussian(x * -1.0, _bent, Hinged(self.name, x * -1.0))
-        return self._of_gaussian(x, _bent, Hinged(self.name, x))
+            return x + self._bent(x * -1.0, _positive, partial(Hinged, self.name))
+        return self._bent(x, _positive, partial(Hinged, self.name))
 
     def curved(self, x: Expression, f: Callable[[np.ndarray], np.ndarray]) -> Expression:
         """f(x) for a smooth f of slow growth: by its Hermite series where x is Gaussian."""
-        return self._of_gaussian(x, f, Curved(self.name, x, f))
+        return self._bent(x, f, lambda body: Curved(self.name, body, f))
 
     def squeezed(
         self,
@@ -151,22 +156,29 @@ class Bending:
         self, x: Expression, f: Callable[[np.ndarray], np.ndarray], to: float, shift: float = 0.0
     ) -> Expression:
         """f(x), which is x + `shift` multiples of `to`, rounded to multiples of it: closed where x is Gaussian."""
-        rounded = Rounded(self.name, x + self.level(shift * to), to, lambda steps: f(mean_at(x, steps)))
-        return self._of_gaussian(x, f, rounded)
+        def process(body: Expression) -> Rounded:
+            return Rounded(self.name, body + self.level(shift * to), to, lambda steps: f(mean_at(body, steps)))
+
+        return self._bent(x, f, process)
 
     def _of_known(self, x: Expression, f: Callable[[np.ndarray], np.ndarray]) -> Expression:
         if x.mean_path.value is not None:
             return Expression(self.space, known.constant(float(f(np.array(x.mean_path.value)))))
         path, note = x.mean_path, "; ".join(x.mean_path.notes)
-        whole = known.whole(("of", self.name, path.key), lambda t: f(path.at(t)), path.periods, note)
+        whole = known.whole(("of", self.name, path.key), lambda t: f(path.as_drawn(t)), path.periods, note)
         return Expression(self.space, whole)
 
-    def _of_gaussian(self, x: Expression, f: Callable[[np.ndarray], np.ndarray], process: Any) -> Expression:
+    def _bent(
+        self, x: Expression, f: Callable[[np.ndarray], np.ndarray], made: Callable[[Expression], Any]
+    ) -> Expression:
+        """f(x), by the process that is made of a Gaussian body; of a choice, of each of its branches."""
         if not x.sources:
             return self._of_known(x, f)
         if not is_gaussian(x):
+            if x.branches is not None:
+                return chosen([(flag, self._bent(branch, f, made)) for flag, branch in x.branches()])
             return self._given_up(x, "moments of a bend are not worked out for a body that is not Gaussian")
-        steady = judge(x).covariance_stationary
+        process, steady = made(x), judge(x).covariance_stationary
         if steady and x.mean_path.value is not None:
             return self.process(process, known.constant(float(process.mean(np.zeros(1, np.int64))[0])))
         periods, note = x.mean_path.periods if steady else None, f"the mean moves in {self.name}"
@@ -174,5 +186,5 @@ class Bending:
         return self.process(process, known.whole(key, process.mean, periods, note))
 
 
-def _bent(v: np.ndarray) -> np.ndarray:
+def _positive(v: np.ndarray) -> np.ndarray:
     return np.maximum(v, 0.0)

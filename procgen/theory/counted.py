@@ -8,6 +8,8 @@ from typing import Any
 
 import numpy as np
 
+from procgen.theory.lumps import Point, parts_of
+
 NODES = 120
 NOTHING = 1e-18
 LISTED = 1 << 20  # chances of counts at nodes up to which they are kept in a table
@@ -98,20 +100,28 @@ def _nodes(of: Any, count: int) -> tuple[np.ndarray, np.ndarray]:
     return weights / weights.sum(), np.where(z < 0, of.ppf(norm.cdf(z)), of.isf(norm.sf(z)))
 
 
+def _nodes_for(law: Callable[[Any], Any], of: Any) -> tuple[np.ndarray, np.ndarray]:
+    """Nodes that are close enough beside the spread of the law at each."""
+    if isinstance(of, Point):
+        return np.ones(1), np.array([of.value])
+    weights, at = _nodes(of, NODES)
+    apart = np.diff(at) / np.maximum(np.ravel(law(at[1:, None]).std()), 1e-300)
+    most = float(np.max(apart[weights[1:] > FELT], initial=0.0))
+    return (weights, at) if most <= FINE else _nodes(of, min(int(NODES * most / FINE) + 1, MOST))
+
+
 class Compound:
     """Whole numbers whose parameter is itself drawn from a continuous law: by an average over its quantiles.
 
     The parameter's ranks are mapped to normals, where a rule with equal steps is exact to rounding for what is smooth.
-    A law whose own spread is small beside the step from one node to the next is not: it gets more of them.
+    A law whose own spread is small beside the step from one node to the next is not: it gets more of them. Of a
+    mixture each part has nodes of its own: between them its quantiles may leap.
     """
 
     def __init__(self, law: Callable[[Any], Any], of: Any):
-        self.weights, at = _nodes(of, NODES)
-        apart = np.diff(at) / np.maximum(np.ravel(law(at[1:, None]).std()), 1e-300)
-        most = float(np.max(apart[self.weights[1:] > FELT], initial=0.0))
-        if most > FINE:
-            self.weights, at = _nodes(of, min(int(NODES * most / FINE) + 1, MOST))
-        self.laws = law(at[:, None])  # one for each node, a row each
+        nodes = [(share, *_nodes_for(law, part)) for share, part in parts_of(of)]
+        self.weights = np.concatenate([share * weights for share, weights, _ in nodes])
+        self.laws = law(np.concatenate([at for *_, at in nodes])[:, None])  # one for each node, a row each
 
     def _averaged(self, name: str, x: Any) -> np.ndarray:
         x = np.asarray(x, float)

@@ -23,6 +23,7 @@ from procgen.theory.sources import IID, OPAQUE, Source, Space, roots
 from procgen.theory.unknown import Unknown
 
 MOST_TERMS = 512
+Branches = Callable[[], "Sequence[tuple[Expression | None, Expression]]"]
 _serial = count()
 
 
@@ -40,6 +41,7 @@ class Expression:
     outputs: Mapping[str, Callable[[], Expression]] = field(default_factory=dict)
     law: Callable[[int], Any] | None = None  # the law at a step, where what it is made of does not tell
     lumpy: bool = False  # whether some of its values have a chance of their own, as 0 of a demand that is intermittent
+    branches: Branches | None = None  # where it is one of several series
 
     # algebra
 
@@ -53,7 +55,8 @@ class Expression:
             if x.law is not None and not rest.sources:
                 law = _moved(x.law, 1.0, rest.mean_path)
         path, linear = self.mean_path + other.mean_path, self.linear + other.linear
-        return Expression(self.space, path, linear, terms, law=law, lumpy=lumpy)
+        branches = self._branching(lambda branch: branch + other) or other._branching(lambda branch: self + branch)
+        return Expression(self.space, path, linear, terms, law=law, lumpy=lumpy, branches=branches)
 
     def __mul__(self, factor: float) -> Expression:
         return Expression(
@@ -64,6 +67,7 @@ class Expression:
             self.outputs,
             law=None if self.law is None or not factor else _moved(self.law, factor),
             lumpy=self.lumpy,
+            branches=self._branching(lambda branch: branch * factor),
         )
 
     __rmul__ = __mul__
@@ -102,7 +106,9 @@ class Expression:
         return Expression(self.space, known.constant(start), linear)
 
     def exp(self) -> Expression:
-        """The exponential of the series; opaque unless the series is linear."""
+        """The exponential of the series: of each branch, or of what is linear; else opaque."""
+        if self.branches:
+            return chosen([(flag, branch.exp()) for flag, branch in self.branches()])
         if self.terms:
             return opaque(self.space, (self,), "moments of an exponential of products are not worked out")
         level = self.mean_path.exp()
@@ -111,6 +117,11 @@ class Expression:
         if level.value is not None:
             return Expression(self.space, known.constant(0.0), terms={Term(exponent=self.linear): level.value})
         return Expression(self.space, known.constant(0.0), terms={Term((level,), exponent=self.linear): 1.0})
+
+    def _branching(self, change: Callable[[Expression], Expression]) -> Branches | None:
+        if (branches := self.branches) is None:
+            return None
+        return lambda: [(flag, change(branch)) for flag, branch in branches()]
 
     def hidden(self, name: str) -> Expression:
         """A hidden output of the term, such as the variance of a garch."""
@@ -129,9 +140,8 @@ class Expression:
     def mean(self, steps: np.ndarray) -> np.ndarray:
         """E x at int64 steps."""
         steps = np.asarray(steps, np.int64)
-        for source in self.linear.sources:
-            if source.kind == OPAQUE and not source.centred:
-                raise Unknown(source.reason)
+        if self.lost:
+            raise Unknown(self.lost)
         for source in self.sources:
             if source.kind == IID and source.law.moment(1) is None:
                 raise Unknown(f"{source.key} has a law without a mean")
@@ -147,6 +157,11 @@ class Expression:
             for n, k in other.parts:
                 total = total + (c * k) * monomials.covariance(self.space, m, n, t, s)
         return total
+
+    @property
+    def lost(self) -> str:
+        """Why its mean is not what the mean path says, but not known; empty where it is."""
+        return next((source.reason for source in self.linear.sources if not source.centred), "")
 
     @property
     def sources(self) -> dict[Source, None]:
@@ -183,7 +198,12 @@ def product(space: Space, expressions: Sequence[Expression]) -> Expression:
             whole = [(_times(a, b), c * k) for a, c in whole for b, k in parts]
         except Unknown as unknown:
             return opaque(space, expressions, unknown.reason)
-    return replace(_sorted_out(space, whole), lumpy=any(x.lumpy for x in expressions))
+    branching = next((i for i, x in enumerate(expressions) if x.branches is not None), None)
+    branches = None
+    if branching is not None:
+        others = [x for i, x in enumerate(expressions) if i != branching]
+        branches = expressions[branching]._branching(lambda branch: product(space, [*others, branch]))
+    return replace(_sorted_out(space, whole), lumpy=any(x.lumpy for x in expressions), branches=branches)
 
 
 def opaque(space: Space, ingredients: Sequence[Expression], reason: str, mean: Known | None = None) -> Expression:
@@ -196,6 +216,20 @@ def opaque(space: Space, ingredients: Sequence[Expression], reason: str, mean: K
     )  # fmt: skip
     lumpy = any(x.lumpy for x in ingredients)
     return Expression(space, mean or known.constant(0.0), Linear({At(Base(source), 0): 1.0}), lumpy=lumpy)
+
+
+def chosen(branches: Sequence[tuple[Expression | None, Expression]]) -> Expression:
+    """What is each of the branches where its flag is 1, and the first, whose flag is None, elsewhere.
+
+    A function of a series' values alone is that function of each branch, and so a choice again.
+    """
+    first = total = branches[0][1]
+    if lost := next((branch.lost for _, branch in branches if branch.lost), ""):
+        return opaque(first.space, [x for pair in branches for x in pair if x is not None], lost)
+    for flag, branch in branches[1:]:
+        if flag is not None:  # what all branches have in common is not multiplied
+            total = total + product(first.space, [flag, branch + first * -1.0])
+    return replace(total, branches=lambda: branches)
 
 
 def _times(a: Term, b: Term) -> Term:

@@ -7,7 +7,7 @@ a pattern minus itself one period ago is nothing.
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from math import lcm
 
 import numpy as np
@@ -56,6 +56,7 @@ class Known:
     slope: float = 0.0
     pieces: Mapping[Piece, float] = field(default_factory=dict)
     names: tuple[str, ...] = field(default=(), compare=False)  # of the terms behind the slope
+    drawn: Function | None = field(default=None, compare=False, repr=False)  # by the arithmetic of the values, if other
 
     @property
     def key(self) -> tuple:
@@ -106,6 +107,10 @@ class Known:
             total = total + c * piece.at(steps)
         return total
 
+    def as_drawn(self, steps: Steps) -> np.ndarray:
+        """Values to the last bit as they are drawn, which rounding to a grid may hang on."""
+        return self.at(steps) if self.drawn is None else self.drawn(steps)
+
     def __add__(self, other: Known) -> Known:
         pieces = dict(self.pieces)
         for piece, c in other.pieces.items():
@@ -115,13 +120,15 @@ class Known:
             self.slope + other.slope,
             {piece: c for piece, c in pieces.items() if c},
             tuple(dict.fromkeys(self.names + other.names)),
+            lambda steps: self.as_drawn(steps) + other.as_drawn(steps),
         )
 
     def scaled(self, factor: float) -> Known:
         if not factor:
             return Known()
         pieces = {piece: factor * c for piece, c in self.pieces.items()}
-        return Known(factor * self.level, factor * self.slope, pieces, self.names)
+        drawn = None if self.drawn is None else lambda steps: factor * self.as_drawn(steps)
+        return Known(factor * self.level, factor * self.slope, pieces, self.names, drawn)
 
     def __mul__(self, other: Known) -> Known:
         for one, rest in ((self, other), (other, self)):
@@ -132,7 +139,8 @@ class Known:
         keys = sorted((self.key, other.key), key=repr)
         note = "; ".join(dict.fromkeys(self.notes + other.notes))
         settles = self.settles and other.settles
-        return whole(("*", *keys), lambda t: self.at(t) * other.at(t), periods, note, settles)
+        drawn = None if self.drawn is None and other.drawn is None else lambda t: self.as_drawn(t) * other.as_drawn(t)
+        return replace(whole(("*", *keys), lambda t: self.at(t) * other.at(t), periods, note, settles), drawn=drawn)
 
     def exp(self) -> Known:
         if self.value is not None:
@@ -145,7 +153,8 @@ class Known:
         for piece, c in self.pieces.items():
             back = piece.lag(by)
             pieces[back] = pieces.get(back, 0.0) + c
-        return Known(self.level - self.slope * by, self.slope, pieces, self.names)
+        drawn = None if self.drawn is None else lambda steps: self.as_drawn(steps - by)
+        return Known(self.level - self.slope * by, self.slope, pieces, self.names, drawn)
 
     def integrate(self, start: float, name: str) -> Known:
         """y(0) = start, y(t) = y(t-1) + f(t), followed backwards below 0; `name` is whose sum it is."""
@@ -198,7 +207,7 @@ def observed(
     if not np.isnan(values).any():
         line = _line(steps, values, ROUNDING * float(np.abs(values).max()))
         if line is not None:
-            return Known(*line, names=(name,))
+            return Known(*line, names=(name,), drawn=at)
     note = note or (f"period of {period:g} steps in {name}" if period else f"known path of {name}")
     return whole(key, at, frozenset([float(period)]) if period else None, note, settles)
 

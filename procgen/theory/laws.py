@@ -43,7 +43,7 @@ def marginal(x: Expression, step: int) -> Any:
         if variance <= 0.0:
             raise Unknown("the value at that step is known, not random")
         return stats.norm(float(x.mean(at)[0]), float(np.sqrt(variance)))
-    if not x.linear and len(x.terms) == 1:
+    if not x.linear and len(x.terms) == 1 and next(iter(x.terms)).exponent:
         (term, c), level = next(iter(x.terms.items())), float(x.mean_path(at)[0])
         return _lognormal(x.space, term, c * float(term.coefficient(at)[0]), level, at)
     if not x.terms and len(x.linear) == 1:
@@ -60,7 +60,7 @@ def marginal(x: Expression, step: int) -> Any:
     for source in x.sources:
         if source.kind == OPAQUE:
             raise Unknown(source.reason)
-    if any(source.kind == PROCESS and source.detail.discrete for source in x.sources):
+    if x.branches is not None or any(source.kind == PROCESS and source.detail.discrete for source in x.sources):
         from procgen.theory.mixtures import mixture_at
 
         return mixture_at(x, step)

@@ -19,6 +19,7 @@ from procgen.theory.unknown import Unknown
 ROUNDING = 1e-12  # of the largest value
 ROUGH = 1e-7  # error of a quadrature against its value, from which on it is not known
 EDGES = 30  # values with a chance of their own between which a quadrature is done piece by piece
+ROUNDING_OF_CHANCES = 1e-12
 NEAR = BESIDE = 1e-6  # of the distance of two values of a lattice: what is as near to a value is it
 
 
@@ -140,6 +141,16 @@ class Lumped(MixedLaw):
     def ppf(self, p: Any) -> NDArray:
         p = np.asarray(p, float)
         return on_atoms(self, p, super().ppf(p))
+
+
+def parts_of(law: Any) -> list[tuple[float, Any]]:
+    """The parts of a mixture, or of a law of few values, with their shares; any other law has one."""
+    if isinstance(law, MixedLaw):
+        return list(zip(law.weights, law.laws, strict=True))
+    shares = chance_of(law, atoms := atoms_of(law)) if atoms_of(law) else np.zeros(0)
+    if float(shares.sum()) < 1.0 - ROUNDING_OF_CHANCES:
+        return [(1.0, law)]
+    return [(float(share), Point(value)) for share, value in zip(shares, atoms, strict=True)]
 
 
 class Measured:

@@ -11,7 +11,7 @@ import numpy as np
 
 from procgen.theory import known
 from procgen.theory.chains import States, Switching
-from procgen.theory.expression import Expression
+from procgen.theory.expression import Expression, chosen
 from procgen.theory.linear import At, Linear, base_of
 from procgen.theory.lumps import Few
 from procgen.theory.processes import Process, Steps
@@ -86,10 +86,11 @@ def number_of_state(
         says = ((SETTLES, f"{leaves} and forgets it") if chain.forgets else (VARIES, f"{leaves} and remembers it"),)
     stages = [make(Indicator(name, driver, chain, k, says), _chance(chain, name, k)) for k in range(len(owners))]
     states = [reduce(add, [x for x, i in zip(stages, owners, strict=True) if i == k]) for k in range(len(names))]
-    total = states[1]
-    for k, state in enumerate(states[2:], start=2):
-        total = total + state * float(k)
-    return offering(total, {f"state {k}": state for k, state in enumerate(states)})
+    zero, one = (Expression(driver.space, known.constant(value)) for value in (0.0, 1.0))
+    flags = [replace(state, branches=partial(_same, [(None, zero), (state, one)])) for state in states]
+    numbers = [Expression(driver.space, known.constant(float(k))) for k in range(len(states))]
+    total = chosen([(state if k else None, numbers[k]) for k, state in enumerate(states)])
+    return offering(total, {f"state {k}": flag for k, flag in enumerate(flags)})
 
 
 def offering(x: Expression, outputs: dict[str, Expression]) -> Expression:
@@ -97,7 +98,7 @@ def offering(x: Expression, outputs: dict[str, Expression]) -> Expression:
     return replace(x, outputs={name: partial(_same, output) for name, output in outputs.items()})
 
 
-def _same(x: Expression) -> Expression:
+def _same(x: Any) -> Any:
     return x
 
 

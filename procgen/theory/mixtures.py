@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from typing import Any
 
 import numpy as np
@@ -23,6 +24,25 @@ ROUNDING = 1e-24  # of the variance: what is left of a spread that a state takes
 
 def mixture_at(x: Expression, step: int) -> Any:
     """The law of x at a step, with the calls of a frozen SciPy distribution; Unknown where it is no mixture."""
+    try:
+        return _mixed(_by_state(x, step))
+    except Unknown:
+        if x.branches is None:
+            raise
+        return _mixed(_by_branch(x.branches(), step))
+
+
+def _mixed(parts: Sequence[tuple[float, Any]]) -> Any:
+    if all(isinstance(law, Normal) for _, law in parts):
+        return Normals(tuple((p, law.mean, law.sd) for p, law in parts)).distribution()
+    from scipy import stats
+
+    laws = [stats.norm(law.mean, law.sd) if isinstance(law, Normal) else law for _, law in parts]
+    return Lumped([p for p, _ in parts], laws)
+
+
+def _by_state(x: Expression, step: int) -> list[tuple[float, Any]]:
+    """The chance of each state of the one chain behind x, and the law of x in it."""
     states = [source for source in x.sources if _is_state(source)]
     if not states:
         raise Unknown("a sum or product of a flag and other chance has no law that is computed")
@@ -32,16 +52,24 @@ def mixture_at(x: Expression, step: int) -> Any:
         raise Unknown("it depends on a chain at several steps, or on several chains: its law is not computed")
     at = np.array([step - delays.pop()], np.int64)
     chances = states[0].detail.chain.chances(at)[0]
-    here, parts = np.array([step], np.int64), []
-    whole = _variance(x, here)
-    for state in np.flatnonzero(chances > 0.0):
-        parts.append((float(chances[state]), _law(_given(x, int(state), chances, here), step, whole)))
-    if all(isinstance(law, Normal) for _, law in parts):
-        return Normals(tuple((p, law.mean, law.sd) for p, law in parts)).distribution()
-    from scipy import stats
+    here, whole = np.array([step], np.int64), _variance(x, np.array([step], np.int64))
+    possible = [int(state) for state in np.flatnonzero(chances > 0.0)]
+    return [(float(chances[state]), _law(_given(x, state, chances, here), step, whole)) for state in possible]
 
-    laws = [stats.norm(law.mean, law.sd) if isinstance(law, Normal) else law for _, law in parts]
-    return Lumped([p for p, _ in parts], laws)
+
+def _by_branch(branches: Sequence[tuple[Expression | None, Expression]], step: int) -> list[tuple[float, Any]]:
+    """The chance of each branch, and its law, where what chooses tells nothing of the branches."""
+    here = np.array([step], np.int64)
+    chooses = [source for flag, _ in branches if flag is not None for source in flag.sources]
+    parts, left = [], 1.0
+    for flag, branch in reversed(branches):
+        if branch.space.linked(chooses, branch.sources):
+            raise Unknown("what chooses a branch has a part in it: its law is not computed")
+        chance = left if flag is None else float(flag.mean(here)[0])
+        left -= chance
+        if chance > 0.0:
+            parts.append((chance, _law(branch, step, _variance(branch, here))))
+    return parts
 
 
 def _variance(x: Expression, here: np.ndarray) -> float:

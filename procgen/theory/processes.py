@@ -116,11 +116,17 @@ class Held(Process):
         return self.with_expression(alone(self.body.space, other), t, s)
 
     def marginal(self, step):
-        from procgen.theory.laws import Affine, marginal
+        from procgen.theory.laws import Affine
 
-        at = self.step_of(np.array([step], np.int64))
-        law = marginal(self.body.lag(max(0, -int(at[0]))), max(int(at[0]), 0))
+        law = law_at(self.body, int(self.step_of(np.array([step], np.int64))[0]))
         return Affine(law, -float(law.mean()), 1.0)
+
+
+def law_at(x: Any, step: int) -> Any:
+    """The law of an expression at a step, which may be one before step 0."""
+    from procgen.theory.laws import marginal
+
+    return marginal(x.lag(max(0, -step)), max(step, 0))
 
 
 class Seen(Held):
@@ -213,10 +219,19 @@ class Curved(Process):
         return (self._at_nodes(levels, sds) @ _weights())[which].reshape(steps.shape)
 
     def covariance(self, t, s):
-        a, b = self._coefficients(t), self._coefficients(s)
-        u, v = self._sd(t), self._sd(s)
+        return self.crossed(self, t, s)
+
+    def with_process(self, own, other, t, s):
+        bodies = self.body.sources | other.detail.body.sources if isinstance(other.detail, Curved) else {}
+        if bodies and self.body.space.gaussian(bodies):
+            return self.crossed(other.detail, t, s)
+        return super().with_process(own, other, t, s)
+
+    def crossed(self, other: Curved, t: Steps, s: Steps) -> np.ndarray:
+        a, b = self._coefficients(t), other._coefficients(s)
+        u, v = self._sd(t), other._sd(s)
         with np.errstate(divide="ignore", invalid="ignore"):
-            r = np.clip(np.where(u * v > 0.0, at_any(self.body, self.body, t, s) / (u * v), 0.0), -1.0, 1.0)
+            r = np.clip(np.where(u * v > 0.0, at_any(self.body, other.body, t, s) / (u * v), 0.0), -1.0, 1.0)
         total = np.zeros(t.shape)
         for n in range(TERMS - 1, 0, -1):
             total = (total + a[n] * b[n]) * r

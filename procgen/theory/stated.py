@@ -13,7 +13,7 @@ from procgen.theory import known, markov
 from procgen.theory.bootstrap import Blocks
 from procgen.theory.counted import LARGEST, Centred, Compound, Inflated
 from procgen.theory.elapsed import Pulled, forecast
-from procgen.theory.expression import Expression, product
+from procgen.theory.expression import Expression, opaque, product
 from procgen.theory.known import Known
 from procgen.theory.linear import At, Linear, base_of
 from procgen.theory.lumps import Lumped, Point, atoms_of
@@ -276,9 +276,11 @@ class Stating:
         the body, a polynomial in it, where both are drawn given the same body. None: it has no closed form.
         """
         level = polynomial(body, mean)
-        path = _mean_path(level, self.name)
         shocks = self.source(key, driver, 1.0)
         shocks = shocks if beside is None else shocks + beside
+        if level.lost:
+            return replace(opaque(self.space, (body, shocks), level.lost), lumpy=discrete or lumpy)
+        path = _mean_path(level, self.name)
         process = Drawn(self.name, shocks, body, level, path, central, given, discrete, lumpy)
         process.highest_moment = float(highest)
         if beside is not None and together is not None:

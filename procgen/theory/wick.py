@@ -18,7 +18,7 @@ import numpy as np
 from procgen.theory import cumulants, exponentials
 from procgen.theory.covariance import covariance
 from procgen.theory.linear import Linear
-from procgen.theory.sources import GARCH, IID, OPAQUE, PROCESS, Source, Space
+from procgen.theory.sources import GARCH, IID, PROCESS, Source, Space
 from procgen.theory.unknown import Unknown
 
 Pair = tuple[np.ndarray, np.ndarray]  # apart, cross
@@ -176,7 +176,7 @@ def _split(whole: np.ndarray, apart: np.ndarray, factors) -> Pair:
 
 def _refuse_uncentred(sources) -> None:
     for source in sources:
-        if source.kind == OPAQUE and not source.centred:
+        if not source.centred:
             raise Unknown(source.reason)
 
 

@@ -119,7 +119,6 @@ def test_what_is_finite_and_not_worked_out_is_not_said_to_have_no_closed_form():
 @pytest.mark.parametrize(
     ("body", "values", "chances"),
     [
-        ({"min": {"of": [{"flag": {"share": 0.2, "stay": 8}}], "and": [{"constant": 0.5}]}}, [0.0, 0.5], [0.8, 1.0]),
         ({"clip": {"of": [{"poisson": {"mean": 3}}], "high": 2}}, [0.0, 1.0, 2.0], [*stats.poisson(3).cdf([0, 1]), 1]),
     ],
 )
@@ -127,6 +126,12 @@ def test_moments_of_a_bend_of_counts_are_not_worked_out_and_its_law_is(body, val
     x = series_of(body)
     assert x.mean(NOW) is None and "not worked out" in x.reason("mean")
     np.testing.assert_allclose(x.marginal(0).cdf(np.array(values)), chances, rtol=1e-12)
+
+
+def test_a_bend_of_a_flag_is_that_of_each_of_its_two_values():
+    x = series_of({"min": {"of": [{"flag": {"share": 0.2, "stay": 8}}], "and": [{"constant": 0.5}]}})
+    assert (x.mean(NOW), x.variance(NOW)) == (pytest.approx(0.2 * 0.5), pytest.approx(0.16 * 0.25))
+    np.testing.assert_allclose(x.marginal(0).cdf(np.array([0.0, 0.5])), [0.8, 1.0], rtol=1e-12)
 
 
 def test_the_law_of_a_bend_of_what_is_skewed_is_known_though_its_moments_are_not():
