@@ -38,7 +38,7 @@ def test_absolute_steps_keep_their_length_across_changes_of_clocks(zone, every, 
 
 def test_the_local_clock_of_a_day_that_skips_the_time_of_its_step_is_past_the_gap():
     """On 2027-03-28 no clock in Berlin shows 02:30: the step of that day begins at 03:30, as pandas has it too."""
-    grid = Grid(5, datetime(2027, 3, 26, 2, 30), (1, "d"), BERLIN)
+    grid = Grid(5, datetime(2027, 3, 26, 2, 30), (1, "day"), BERLIN)
     shown = pd.DatetimeIndex(grid.moments(np.arange(5)).astype("M8[us]"), tz="UTC").tz_convert(BERLIN).tz_localize(None)
     np.testing.assert_array_equal(grid.local(np.arange(5)), shown.to_numpy().astype("M8[us]").astype(np.int64))
     assert shown[2] == pd.Timestamp("2027-03-28T03:30")
