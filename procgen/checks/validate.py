@@ -24,7 +24,7 @@ from procgen.checks.judge_shocks import cross_checks, shock_checks
 from procgen.checks.lane import in_one_process
 from procgen.checks.neighbours import plan_neighbours
 from procgen.checks.probes import PAIR_LIMIT, SeriesPlan, plan_cross, plan_series
-from procgen.checks.recover import Cannot, Expected, Route, expected, route
+from procgen.checks.recover import Cannot, Expected, Route, expected, in_doubles, route
 from procgen.checks.relations import plan_relations
 from procgen.checks.smooth import smooth
 from procgen.checks.special import lumpy
@@ -148,6 +148,7 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
     from procgen.terms.graph import build
     from procgen.terms.supports import column_type
     from procgen.theory import theory
+    from procgen.theory.doubles import rounding_of
 
     graph = build(spec)
     gaps = missing.taken_out(graph, spec)
@@ -155,25 +156,28 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Pla
     steps = steps or spec.time.steps
     series, routes, precision = [], {}, []
     for name, declared in spec.series.items():
-        grain = grain_of(declared, th[name], steps)
-        way = route(name, th[name], graph, grain, same_draws)
+        doubles = rounding_of(th, name, steps)
+        grain = max(grain_of(declared, th[name], steps), 0.0 if doubles is None else doubles.cell)
+        lost = str(doubles) if doubles is not None and doubles.hides else ""
+        way = Cannot(lost) if lost else in_doubles(route(name, th[name], graph, grain, same_draws), doubles)
         if isinstance(way, Route):
             way.salt = f" of seed {spec.seed}"
         blind = _unseen(way)
-        plan = plan_series(name, th[name], steps, grain, _periods(graph, name), blind)
+        plan = plan_series(name, th[name], steps, grain, _periods(graph, name), blind, lost)
         flat = flattened(th, name, steps)
-        plan.may_stay = may_stay(th[name], graph, name, flat)
+        plan.may_stay = bool(lost) or may_stay(th[name], graph, name, flat)
         plan.smooth = smooth(graph, name, steps, flat)
         plan.within = known_within(th, name, steps)
         series.append(plan)
         routes[name] = way
         random = th[name].random
-        reach = Reach(th[name], grain, steps, spec.paths * steps) if random else None
+        reach = Reach(th[name], grain, steps, spec.paths * steps) if random and not lost else None
         possible = possible_of(graph, name, declared, bool(flat) or vanishes(th[name], steps)) if random else Possible()
         kind, few = column_type(graph, name), lumpy(th[name])
         precision.append(
             Precision(name, kind, declared.decimals, random, few, reach, possible=possible, smooth=plan.smooth)
         )
+        precision[-1].cell = 0.0 if doubles is None else doubles.cell
         precision[-1].repeats = repeats_of(plan, way, graph, few, spec.paths * steps) if random else None
     ways = [way for way in routes.values() if isinstance(way, Route) and way.scores is not None]
     pairs = {(a.series, b.series): expected(a, b, th.axis.space) for a, b in list(combinations(ways, 2))[:PAIR_LIMIT]}
