@@ -21,6 +21,7 @@ _WHOLE_LAW = (
     "law", "shocks: distribution function", "shocks: within the law's ends", "share below", "share of", FARTHEST,
     FARTHEST_SHOCK,
 )  # fmt: skip
+_LEVEL = 0.001  # at which what copies make would be no departure
 _SHAPE = "shocks: shape of the law"
 _PRODUCTS = ("shocks: autocorrelation", "shocks: neighbouring paths", "shocks: correlation between series")
 _SIZES = ("shocks: variance", "shocks: spread score")
@@ -41,8 +42,17 @@ def departures(rows: Sequence[Check]) -> list[Groups]:
     for row in rows:
         series.setdefault(row.series, []).append(row)
     sizes = {name: _size(mine) for name, mine in series.items()}
-    found = [_of_series(mine, sizes) for mine in series.values() if any(row.outcome == "departs" for row in mine)]
-    found = [part for groups in found for part in _structure_apart(groups)]
+    copied = _of_copies(rows)
+    found: list[Groups] = []
+    for mine in series.values():
+        facts = [row for row in mine if row.outcome == "departs" and sort_of(row) == "structure"]
+        told = copied.keys() | {id(row) for row in facts}
+        rest = [row for row in mine if id(row) not in told]
+        found += [_by_kind(facts, sizes)] if facts else []
+        found += [_of_series(rest, sizes)] if any(row.outcome == "departs" for row in rest) else []
+    for groups in found:
+        behind = next((row for row in groups[0] if row.copied is not None), None)
+        groups += _by_kind([row for of, row in copied.values() if of is behind], sizes)
     return sorted(found, key=lambda groups: (groups[0][0].kind != "structure", -_largest(groups, sizes)))
 
 
@@ -50,10 +60,32 @@ def _largest(groups: Groups, sizes: Mapping[str, float]) -> float:
     return max(_gain(group[0], sizes) for group in groups)
 
 
-def _structure_apart(groups: Groups) -> list[Groups]:
-    facts = [group for group in groups if sort_of(group[0]) == "structure"]
-    rest = [group for group in groups if sort_of(group[0]) != "structure"]
-    return [part for part in (facts, rest) if part]
+def _of_copies(rows: Sequence[Check]) -> dict[int, tuple[Check, Check]]:
+    """What follows from paths that are copies of each other: id of a row -> the row that tells of them, and it.
+
+    A kind of departure in a series does, or does not, as a whole.
+    """
+    tells = {row.series: row for row in rows if row.copied is not None and row.outcome == "departs"}
+    if not tells:
+        return {}
+    needed = math.log(sum(row.log_p is not None for row in rows) or 1) - math.log(_LEVEL)
+    found, others = {}, set()
+    for row in rows:
+        behind = [tells[name] for name in row.series.split(" ~ ") if name in tells]
+        both = len(behind) == len(row.series.split(" ~ "))
+        if both and all(one.copied is not None and one.copied.explains(row, needed) for one in behind):
+            found[id(row)] = behind[0], row
+        elif row.outcome == "departs":
+            others.add((row.series, sort_of(row)))
+    mine = {key: pair for key, pair in found.items() if (pair[1].series, sort_of(pair[1])) not in others}
+    return {key: (behind, row) for key, (behind, row) in mine.items() if row.outcome == "departs"}
+
+
+def _by_kind(rows: Sequence[Check], sizes: Mapping[str, float]) -> Groups:
+    kinds: dict[tuple[str, str], list[Check]] = {}
+    for row in sorted(rows, key=lambda row: -_gain(row, sizes)):
+        kinds.setdefault((row.series, sort_of(row)), []).append(row)
+    return list(kinds.values())
 
 
 def _of_series(rows: Sequence[Check], sizes: Mapping[str, float]) -> Groups:

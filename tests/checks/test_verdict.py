@@ -8,10 +8,11 @@ import pytest
 from statsmodels.stats.multitest import multipletests
 
 from procgen.checks.judge import Sample, anderson_darling, normal_mean, sample_mean, unit
-from procgen.checks.validate import gathered, judged, plan_of
+from procgen.checks.judgement import judged
+from procgen.checks.planning import plan_of
 from procgen.checks.verdict import COLUMNS, Check, Verdict, holm
 from procgen.checks.words import alike, p_text, side_by_side
-from tests.studies.departures import draw, spec_of
+from tests.studies.departures import draw, gathered, spec_of
 
 
 def test_holm_of_four():
@@ -241,7 +242,7 @@ def test_a_pipeline_may_insist_that_all_was_judged(options, code, tmp_path):
     """Of a garch of few steps, what came before step 0 cannot be forgotten: its clustering and law are not judged."""
     from typer.testing import CliRunner
 
-    from procgen.cli import app
+    from procgen.app import app
 
     body = [{"garch": {"omega": 0.05, "alpha": 0.1, "beta": 0.85}}]
     raw = {"procgen": 1, "seed": 3, "paths": 600, "time": {"steps": 60}, "series": {"x": body}}
