@@ -159,11 +159,17 @@ def _refuse(path: Any, chunk: Chunk, size: int, values: int, many: bool) -> None
 
 def _pages(path: Any, file: BinaryIO, begin: int, length: int) -> Iterator[tuple[int, int]]:
     """(bytes when unpacked, values) of each page of a column chunk; of dictionaries no values."""
+    for _, header in headers(path, file, begin, length):
+        yield header.get(2, -1), 0 if header.get(1, -1) == 2 else header.get(501, header.get(801, 0))
+
+
+def headers(path: Any, file: BinaryIO, begin: int, length: int) -> Iterator[tuple[int, dict[int, int]]]:
+    """Where the content of each page of a column chunk begins, and what its header says: see `_struct`."""
     end, last = begin + length, (b"", dict[int, int]())
     while 0 <= begin < end:
         last = text, header = _header(path, file, begin, *last)
-        packed, kind = header.get(3, -1), header.get(1, -1)
-        yield header.get(2, -1), 0 if kind == 2 else header.get(501, header.get(801, 0))
+        yield begin + len(text), header
+        packed = header.get(3, -1)
         if packed < 0:
             return
         begin += len(text) + packed
