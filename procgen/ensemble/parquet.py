@@ -178,7 +178,8 @@ def _read_groups(path: Place, rows: Form, first_path: int, end_path: int, room: 
     """Blocks of layout long, one row group in memory, however it is cut into them."""
     part, unit = rows.whole, rows.units[0]
     with _opened(path, rows) as file:
-        row, again, plain = 0, Again(path, file.metadata, rows.by_step), Plain(path, file, room)
+        row, plain = 0, Plain(path, file, room)
+        again = Again(path, file.metadata, rows.by_step, plain.codecs)
         for group in range(file.num_row_groups):
             here = range(row, row + file.metadata.row_group(group).num_rows)
             row = here.stop

@@ -14,7 +14,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from procgen.spec.pages import chunk_begin, headers
+from procgen.spec.pages import chunk_begin, codecs, headers
 
 if TYPE_CHECKING:
     import pyarrow as pa
@@ -24,8 +24,7 @@ Room = Callable[[str, int], np.ndarray]  # name of a column, bytes: memory (uint
 
 _TYPES = {"double": ("DOUBLE", "None"), "float": ("FLOAT", "None"), "int64": ("INT64", "None")}
 _TIME = ("INT64", "timeUnit=microseconds")
-_PACKED = ("UNCOMPRESSED", "ZSTD")
-_PLAIN, _DATA_PAGE = 0, 0  # as the format numbers them
+_PLAIN, _DATA_PAGE, _AS_IS, _ZSTD = 0, 0, 0, 6  # as the format numbers them
 
 
 def new(name: str, size: int) -> np.ndarray:
@@ -38,8 +37,10 @@ class Plain:
 
     def __init__(self, path: object, file: pq.ParquetFile, room: Room = new):
         self._path, self._found, self._room = path, file.metadata, room
+        self.codecs: list[list[int]] = []
         self._at: dict[str, tuple[int, pa.DataType]] = {}
         if isinstance(path, Path) and sys.byteorder == "little":
+            self.codecs = codecs(path)
             schema = file.schema_arrow
             leaves = {file.schema.column(k).path: k for k in range(len(file.schema))}
             for name, kind in zip(schema.names, schema.types, strict=True):
@@ -83,7 +84,8 @@ class Plain:
         """The bytes of each page of a column, in `out` where that is given; it ends at the first that is not plain."""
         place, kind = self._at[name]
         chunk, width = self._found.row_group(group).column(place), kind.bit_width // 8
-        if chunk.compression not in _PACKED or chunk.has_dictionary_page or chunk.file_path:
+        codec = self.codecs[group][place] if group < len(self.codecs) else None
+        if codec not in (_AS_IS, _ZSTD) or chunk.has_dictionary_page or chunk.file_path:
             return
         left = width * self._rows(group)
         with Path(str(self._path)).open("rb", buffering=0) as file:
@@ -94,7 +96,7 @@ class Plain:
                     return
                 file.seek(begin)
                 page = self._room("page", size) if out is None else out[len(out) - left :][:size]
-                if not _filled(file, page, packed, chunk.compression):
+                if not _filled(file, page, packed, codec):
                     return
                 yield page
                 left -= size
@@ -110,9 +112,9 @@ def _is_plain(column: Any, kind: pa.DataType) -> bool:
     return _TYPES.get(str(kind)) == (physical, logical)
 
 
-def _filled(file: Any, out: np.ndarray, packed: int, compression: str) -> bool:
+def _filled(file: Any, out: np.ndarray, packed: int, codec: int) -> bool:
     """Fill memory with the content of the page that a file is at; whether it has as much."""
-    if compression == "UNCOMPRESSED":
+    if codec == _AS_IS:
         return packed == len(out) and _read(file, out)
     import pyarrow as pa
 

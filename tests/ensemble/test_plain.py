@@ -10,6 +10,7 @@ import pytest
 
 from procgen.ensemble import EnsembleError
 from procgen.ensemble.plain import Plain
+from procgen.spec.pages import codecs
 from tests.ensemble.fakes import fake_render, fake_spec
 
 ROWS = 300_000  # three pages of 1 MB, or fifteen of 20,000 rows
@@ -83,6 +84,31 @@ def test_memory_is_used_again_where_it_is_lent(tmp_path):
             values = np.frombuffer(plain.read(group, ["x"])["x"].buffers()[1])
             assert np.shares_memory(values, memory["x"])
             assert np.array_equal(values, VALUES[1000 * group :][:1000])
+
+
+def test_how_columns_are_packed_is_read_from_the_footer(tmp_path):
+    packed = {"x": "none", "y": "snappy", "n": "zstd", "t": "gzip"}
+    path = written(tmp_path / "a.parquet", compression=packed, row_group_size=ROWS // 2)
+    with pq.ParquetFile(path) as file:
+        groups = [file.metadata.row_group(group) for group in range(2)]
+        names = [[group.column(k).compression for k in range(4)] for group in groups]
+    assert names == [["UNCOMPRESSED", "SNAPPY", "ZSTD", "GZIP"]] * 2
+    assert codecs(path) == [[0, 1, 6, 2]] * 2  # parquet.thrift, CompressionCodec
+
+
+def test_an_unknown_packing_ends_no_process(tmp_path):
+    made = fake_render(fake_spec(seed=8, paths=16, steps=20, columns={"x": {}}), tmp_path)
+    path = made.path / made.manifest.parts[0].file
+    data, at = bytearray(path.read_bytes()), 0
+    for _ in range(3):  # of the columns path, step, x: the codec is field 4, which follows the names of the path
+        at = data.index(b"\x19\x18", at + 1)
+    end = data.index(b"x", at) + 1
+    assert data[end] == 0x15
+    data[end + 1] = 2 * 40
+    path.write_bytes(data)
+    assert codecs(path)[0][2] == 40
+    with pytest.raises(EnsembleError, match="damaged"):
+        sum(values["x"].size for _, _, values in made.blocks())
 
 
 @pytest.mark.parametrize("row", [0, 131_071, 131_072, ROWS - 1])
