@@ -92,7 +92,7 @@ def _context(shared: Mapping[str, Any]) -> tuple[OnDisk, Plan]:
 
 
 def _made(shared: Mapping[str, Any]) -> tuple[OnDisk, Plan]:
-    from procgen.checks.validate import plan_of
+    from procgen.checks.planning import plan_of
     from procgen.ensemble.source import read_spec
 
     ensemble = open_ensemble(shared["out"])

@@ -9,8 +9,8 @@ from scipy import stats
 
 from procgen.checks import judge
 from procgen.checks.judge import Sample
+from procgen.checks.planning import plan_of
 from procgen.checks.start import Early, differences, from_one, stretches
-from procgen.checks.validate import plan_of
 from tests.studies.departures import draw, spec_of, verdict
 
 PATHS, STEPS = 2000, 40
