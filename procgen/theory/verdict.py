@@ -206,7 +206,8 @@ def _heteroskedastic(findings: _Findings, source: Source) -> None:
         stands = {True: "strictly stationary", False: "not stationary", None: "strict stationarity open"}[strict]
         findings.say(INFINITE, f"{name} has no finite {moment}; {stands}: {why}")
         return
-    findings.notes.append(f"{name} is uncorrelated but not independent: its conditional variance moves")
+    # A shock goes by the name of the term that it drives, whose own values may be correlated.
+    findings.notes.append(f"shocks of {name} are uncorrelated but not independent: their conditional variance moves")
 
 
 def _frozen(findings: _Findings, x: Expression) -> None:
