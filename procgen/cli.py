@@ -5,9 +5,8 @@ from __future__ import annotations
 from pathlib import Path
 from typing import Annotated, Any
 
-import typer
-
 from procgen.console import guarded, printed, progress, run, said
+from procgen.declared import Argument, Option, command, fault
 from procgen.difference_command import HELP, difference
 from procgen.export_command import EXAMPLES, Columns, export
 from procgen.options import (
@@ -29,45 +28,15 @@ from procgen.options import (
     within,
 )
 
-CONTEXT = {"help_option_names": ["-h", "--help"]}
-app = typer.Typer(
-    name="procgen",
-    help="Time series whose true behaviour is known: what a spec implies, paths of it, and whether they agree.",
-    epilog="A spec is a YAML file; specs/README.md in the checkout describes the language.",
-    context_settings=CONTEXT,
-    no_args_is_help=True,
-    add_completion=False,
-    rich_markup_mode=None,
-    pretty_exceptions_enable=False,
-)
-
-
-def _version(wanted: bool) -> None:
-    if wanted:
-        from procgen import __version__
-
-        printed(f"procgen {__version__}")
-        raise typer.Exit
-
-
-@app.callback()
-def common(
-    version: Annotated[
-        bool, typer.Option("--version", help="Print the version.", callback=_version, is_eager=True)
-    ] = False,
-) -> None:
-    pass
-
-
-SpecFile = Annotated[Path, typer.Argument(metavar="SPEC", help="The spec, a YAML file.", show_default=False)]
+SpecFile = Annotated[Path, Argument(metavar="SPEC", help="The spec, a YAML file.", show_default=False)]
 Scheduler = Annotated[
     str | None,
-    typer.Option(metavar="local|ADDRESS", help="Work on a Dask cluster: the one there, or one started here."),
+    Option(metavar="local|ADDRESS", help="Work on a Dask cluster: the one there, or one started here."),
 ]
 Overwrite = Annotated[
-    bool, typer.Option("--overwrite", help="Replace a FILE that procgen did not write; its own it replaces.")
+    bool, Option("--overwrite", help="Replace a FILE that procgen did not write; its own it replaces.")
 ]
-Json = Annotated[bool, typer.Option("--json", help="Print JSON instead of text.")]
+Json = Annotated[bool, Option("--json", help="Print JSON instead of text.")]
 
 
 def numbers_of(text: str) -> tuple[float, ...]:
@@ -77,7 +46,7 @@ def numbers_of(text: str) -> tuple[float, ...]:
     except ValueError:
         numbers = ()
     if not numbers or not all(0.0 <= f <= 0.5 for f in numbers):
-        raise typer.BadParameter(f"expected frequencies in cycles a step, from 0 to 0.5, such as 0,0.1, got {text!r}")
+        raise fault(f"expected frequencies in cycles a step, from 0 to 0.5, such as 0,0.1, got {text!r}")
     return numbers
 
 
@@ -85,7 +54,7 @@ def horizons_of(text: str) -> tuple[int, ...]:
     """Steps ahead from `1,10,100`."""
     parts = [part.strip() for part in text.split(",")]
     if not all(part.isdecimal() and len(part) <= 7 and 1 <= int(part) <= 1_000_000 for part in parts):
-        raise typer.BadParameter(f"expected steps ahead from 1 to 1,000,000, such as 1,10,100, got {text!r}")
+        raise fault(f"expected steps ahead from 1 to 1,000,000, such as 1,10,100, got {text!r}")
     return tuple(int(part) for part in parts)
 
 
@@ -93,11 +62,11 @@ def column_of(text: str) -> tuple[str, str]:
     """Series and column from `load_kw=load`."""
     series, given, column = text.partition("=")
     if not (series and given and column):
-        raise typer.BadParameter(f"expected SERIES=NAME such as load_kw=load, got {text!r}", param_hint="--series-col")
+        raise fault(f"expected SERIES=NAME such as load_kw=load, got {text!r}", where="--series-col")
     return series, column
 
 
-@app.command(
+@command(
     short_help="Draw paths of a spec.",
     epilog="\b\nExamples:\n  procgen render specs/pump-flow.yaml -o build/pump-flow --paths 5000\n"
     "  procgen render specs/cold-store.yaml --variant all -o build/cold-store",
@@ -105,26 +74,24 @@ def column_of(text: str) -> tuple[str, str]:
 @guarded
 def render(
     spec: SpecFile,
-    out: Annotated[
-        str, typer.Option("-o", "--out", metavar="OUT", help="Folder to write, or a URL.", show_default=False)
-    ],
+    out: Annotated[str, Option("-o", "--out", metavar="OUT", help="Folder to write, or a URL.", show_default=False)],
     paths: Annotated[
-        int | None, typer.Option(parser=whole(1), metavar="N", help="Number of paths, instead of the spec's.")
+        int | None, Option(parser=whole(1), metavar="N", help="Number of paths, instead of the spec's.")
     ] = None,
-    first_path: Annotated[int, typer.Option(parser=whole(0), metavar="N", help="Number of the first path.")] = 0,
+    first_path: Annotated[int, Option(parser=whole(0), metavar="N", help="Number of the first path.")] = 0,
     steps: Annotated[
-        int | None, typer.Option(parser=whole(1), metavar="N", help="Number of steps, instead of the spec's.")
+        int | None, Option(parser=whole(1), metavar="N", help="Number of steps, instead of the spec's.")
     ] = None,
-    seed: Annotated[int | None, typer.Option(parser=whole(0), metavar="N", help="Seed, instead of the spec's.")] = None,
+    seed: Annotated[int | None, Option(parser=whole(0), metavar="N", help="Seed, instead of the spec's.")] = None,
     start: Start = None,
     variant: VariantOrAll = None,
     setting: Settings = None,
     workers: Annotated[
-        int | None, typer.Option(parser=whole(1), metavar="N", help="Processes; what the size repays when absent.")
+        int | None, Option(parser=whole(1), metavar="N", help="Processes; what the size repays when absent.")
     ] = None,
     layout: Annotated[
         str,
-        typer.Option(
+        Option(
             metavar="long|panel|wide|nested",
             help="A row of a file is a path and step, an observation, a step, or a path.",
         ),
@@ -132,16 +99,14 @@ def render(
     columns: Columns = None,
     partition: Annotated[
         str | None,
-        typer.Option(metavar="series|paths", help="What a file holds: one series, or all series of some paths."),
+        Option(metavar="series|paths", help="What a file holds: one series, or all series of some paths."),
     ] = None,
     reveal: Annotated[
         str | None,
-        typer.Option(metavar="all|NAME,…", help="Terms and hidden outputs to write beside the series."),
+        Option(metavar="all|NAME,…", help="Terms and hidden outputs to write beside the series."),
     ] = None,
-    resume: Annotated[
-        bool, typer.Option("--resume", help="Go on with a render that was stopped, or mend one.")
-    ] = False,
-    overwrite: Annotated[bool, typer.Option("--overwrite", help="Remove the ensemble that is in OUT first.")] = False,
+    resume: Annotated[bool, Option("--resume", help="Go on with a render that was stopped, or mend one.")] = False,
+    overwrite: Annotated[bool, Option("--overwrite", help="Remove the ensemble that is in OUT first.")] = False,
     scheduler: Scheduler = None,
     expect: Expect = None,
 ) -> None:
@@ -180,13 +145,13 @@ def render(
         last = within(out, [*specs][-1])
         printed(f"all have the same shocks: procgen difference {within(out, 'base')} {last} tells what differs")
     if wanted is not None:
-        raise typer.Exit(as_expected(out, wanted))
+        raise SystemExit(as_expected(out, wanted))
 
 
-app.command("export", short_help="Write an ensemble as one file for another tool.", epilog=EXAMPLES)(export)
+command("export", short_help="Write an ensemble as one file for another tool.", epilog=EXAMPLES)(export)
 
 
-@app.command(
+@command(
     short_help="Compare paths with the theory of their spec.",
     epilog="\b\nExamples:\n  procgen validate build/pump-flow\n"
     "  procgen validate mine.csv --spec specs/pump-flow.yaml --path-col run --step-col hour\n"
@@ -196,32 +161,30 @@ app.command("export", short_help="Write an ensemble as one file for another tool
 def validate(
     data: Annotated[
         str,
-        typer.Argument(metavar="OUT|DATA", help="An ensemble, or a Parquet or CSV file.", show_default=False),
+        Argument(metavar="OUT|DATA", help="An ensemble, or a Parquet or CSV file.", show_default=False),
     ],
-    spec: Annotated[Path | None, typer.Option(metavar="SPEC", help="The spec that DATA should follow.")] = None,
-    path_col: Annotated[str | None, typer.Option(metavar="NAME", help="Column of DATA with the path.")] = None,
-    step_col: Annotated[str | None, typer.Option(metavar="NAME", help="Column of DATA with the step.")] = None,
-    time_col: Annotated[str | None, typer.Option(metavar="NAME", help="Column of DATA with the time instead.")] = None,
+    spec: Annotated[Path | None, Option(metavar="SPEC", help="The spec that DATA should follow.")] = None,
+    path_col: Annotated[str | None, Option(metavar="NAME", help="Column of DATA with the path.")] = None,
+    step_col: Annotated[str | None, Option(metavar="NAME", help="Column of DATA with the step.")] = None,
+    time_col: Annotated[str | None, Option(metavar="NAME", help="Column of DATA with the time instead.")] = None,
     series_col: Annotated[
         list[str] | None,
-        typer.Option(metavar="SERIES=NAME", help="Column of DATA with a series, or its id; may be given again."),
+        Option(metavar="SERIES=NAME", help="Column of DATA with a series, or its id; may be given again."),
     ] = None,
-    id_col: Annotated[
-        str | None, typer.Option(metavar="NAME", help="Column of DATA that says whose its value is.")
-    ] = None,
-    value_col: Annotated[str | None, typer.Option(metavar="NAME", help="Column of DATA with that value.")] = None,
+    id_col: Annotated[str | None, Option(metavar="NAME", help="Column of DATA that says whose its value is.")] = None,
+    value_col: Annotated[str | None, Option(metavar="NAME", help="Column of DATA with that value.")] = None,
     false_alarm: Annotated[
-        float, typer.Option(parser=share(1e-12, 0.5), metavar="P", help="Chance of a false alarm over all checks.")
+        float, Option(parser=share(1e-12, 0.5), metavar="P", help="Chance of a false alarm over all checks.")
     ] = 0.001,
     workers: Annotated[
-        int | None, typer.Option(parser=whole(1), metavar="N", help="Processes; what the size repays when absent.")
+        int | None, Option(parser=whole(1), metavar="N", help="Processes; what the size repays when absent.")
     ] = None,
     scheduler: Scheduler = None,
     json: Json = False,
     in_full: Annotated[
-        bool, typer.Option("--in-full", help="Agreement in part is not enough: end with 2 where a side was not judged.")
+        bool, Option("--in-full", help="Agreement in part is not enough: end with 2 where a side was not judged.")
     ] = False,
-    report: Annotated[Path | None, typer.Option(metavar="FILE.html", help="Also write an HTML report.")] = None,
+    report: Annotated[Path | None, Option(metavar="FILE.html", help="Also write an HTML report.")] = None,
     overwrite: Overwrite = False,
 ) -> None:
     """Compare paths with the theory of their spec.
@@ -247,22 +210,20 @@ def validate(
     if written:
         said(written) if json else printed(f"\n{written}")
     lacking = in_full and verdict.agrees is True and not verdict.complete
-    raise typer.Exit(2 if lacking else {True: 0, False: 1, None: 2}[verdict.agrees])
+    raise SystemExit(2 if lacking else {True: 0, False: 1, None: 2}[verdict.agrees])
 
 
-@app.command(
+@command(
     short_help="Draw what a spec states, and what paths show.",
     epilog="\b\nExamples:\n  procgen picture specs/pump-flow.yaml -o pump-flow.html\n"
     "  procgen picture build/pump-flow -o pump-flow.svg",
 )
 @guarded
 def picture(
-    source: Annotated[
-        str, typer.Argument(metavar="SPEC|OUT", help="A spec, or a rendered ensemble.", show_default=False)
-    ],
+    source: Annotated[str, Argument(metavar="SPEC|OUT", help="A spec, or a rendered ensemble.", show_default=False)],
     out: Annotated[
         Path,
-        typer.Option(
+        Option(
             "-o",
             "--out",
             metavar="FILE",
@@ -284,13 +245,13 @@ def picture(
 
     other = variant is not None or setting or start is not None
     if other and place_of(source).is_dir():
-        raise typer.BadParameter("an ensemble is drawn as it is; give a spec with --variant, --set and --start")
+        raise fault("an ensemble is drawn as it is; give a spec with --variant, --set and --start")
     with progress("reading") as tick:
         what = one_asked(Path(source), variant, setting, start) if other else source
         printed(f"picture: {draw(what, out, tick, overwrite)}")
 
 
-@app.command(
+@command(
     short_help="Print what a spec implies.",
     epilog="\b\nExample:\n  procgen theory specs/pump-flow.yaml --at 0,1,24 --lags 5",
 )
@@ -300,18 +261,18 @@ def theory(
     json: Json = False,
     at: Annotated[
         tuple | None,
-        typer.Option(parser=steps_of, metavar="0,1,10", help="Steps at which to give mean and variance."),
+        Option(parser=steps_of, metavar="0,1,10", help="Steps at which to give mean and variance."),
     ] = None,
     lags: Annotated[
-        int, typer.Option(parser=whole(0, 100_000), metavar="N", help="Largest lag of the autocovariances.")
+        int, Option(parser=whole(0, 100_000), metavar="N", help="Largest lag of the autocovariances.")
     ] = 40,
     frequencies: Annotated[
         tuple | None,
-        typer.Option(parser=numbers_of, metavar="0,0.1", help="Frequencies, in cycles a step, of spectral densities."),
+        Option(parser=numbers_of, metavar="0,0.1", help="Frequencies, in cycles a step, of spectral densities."),
     ] = None,
     horizon: Annotated[
         tuple | None,
-        typer.Option(parser=horizons_of, metavar="1,10,100", help="Steps ahead for the variances of forecast errors."),
+        Option(parser=horizons_of, metavar="1,10,100", help="Steps ahead for the variances of forecast errors."),
     ] = None,
     start: Start = None,
     variant: Variant = None,
@@ -325,14 +286,14 @@ def theory(
     printed((theory_json if json else theory_text)(loaded, pg.theory(loaded), at, lags, frequencies, horizon), json)
 
 
-@app.command(
+@command(
     short_help="List the terms a spec can use, or explain one.",
     epilog="\b\nExamples:\n  procgen terms\n  procgen terms linear\n  procgen terms garch",
 )
 @guarded
 def terms(
     kind: Annotated[
-        str | None, typer.Argument(metavar="[KIND]", help="A term, a law, or a family of terms.", show_default=False)
+        str | None, Argument(metavar="[KIND]", help="A term, a law, or a family of terms.", show_default=False)
     ] = None,
 ) -> None:
     """List the terms a spec can use, or say what is known of one: parameters, example, theory, source."""
@@ -341,7 +302,7 @@ def terms(
     printed(catalogue.screen() if kind is None else catalogue.page(kind))
 
 
-@app.command(
+@command(
     short_help="Print the JSON Schema of the spec language, for editors.",
     epilog="\b\nExample:\n  procgen schema > procgen.schema.json",
 )
@@ -358,17 +319,15 @@ def schema() -> None:
     printed(dumps(spec_schema(), indent=1, ensure_ascii=False), json=True)
 
 
-@app.command(
+@command(
     short_help="Compare values with the digests in their manifest.",
     epilog="\b\nExamples:\n  procgen digest build/pump-flow\n  procgen digest build/pump-flow --redraw",
 )
 @guarded
 def digest(
-    out: Annotated[str, typer.Argument(metavar="OUT", help="A rendered ensemble.", show_default=False)],
+    out: Annotated[str, Argument(metavar="OUT", help="A rendered ensemble.", show_default=False)],
     expect: Expect = None,
-    redraw: Annotated[
-        bool, typer.Option("--redraw", help="Also draw some paths again; name the first difference.")
-    ] = False,
+    redraw: Annotated[bool, Option("--redraw", help="Also draw some paths again; name the first difference.")] = False,
 ) -> None:
     """Compare the values in OUT with the digests in its manifest, and print the digest.
 
@@ -379,12 +338,12 @@ def digest(
     with progress("reading") as tick:
         result = check_digest(out, expect=expect, redraw=redraw, progress=tick)
     printed(result.text())
-    raise typer.Exit(0 if result.ok else 1)
+    raise SystemExit(0 if result.ok else 1)
 
 
-app.command("difference", **HELP)(difference)
+command("difference", **HELP)(difference)
 
 
 def main() -> None:
     """Run the command line of this process."""
-    run(app)
+    run()

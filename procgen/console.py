@@ -11,8 +11,7 @@ from contextlib import contextmanager
 from functools import wraps
 from typing import Any, NoReturn
 
-import typer
-
+from procgen.declared import plain
 from procgen.ensemble.errors import few_words, lacks_memory
 from procgen.ensemble.own import claim
 from procgen.report.letters import (  # here, since a failure may leave no memory and no file to read it from
@@ -38,13 +37,13 @@ def guarded(command: Callable[..., None]) -> Callable[..., None]:
         except KeyboardInterrupt:
             kept = "; what was finished is kept, and render goes on with --resume"
             said("stopped" + (kept if command.__name__ == "render" else ""))
-            raise typer.Exit(INTERRUPTED) from None
+            raise SystemExit(INTERRUPTED) from None
 
     return safe
 
 
-def run(app: typer.Typer) -> NoReturn:
-    """Run the app and end the process with its exit code, without a traceback whatever happens.
+def run() -> NoReturn:
+    """Run a command and end the process with its exit code, without a traceback whatever happens.
 
     The matrices here are small: threads of a linear algebra library only wait for each other, and much so beside
     other work. A process with one thread can be forked; pyarrow begins another for an allocator that it does not use,
@@ -59,13 +58,29 @@ def run(app: typer.Typer) -> NoReturn:
     os.environ.setdefault("MIMALLOC_PURGE_DELAY", "-1")
     signal.signal(signal.SIGTERM, signal.default_int_handler)
     try:
-        app()
+        _call(sys.argv[1:])
     except KeyboardInterrupt:  # before or after the command itself
         sys.exit(INTERRUPTED)
     except MemoryError as error:
         said(sentence(error))
         sys.exit(BAD_INPUT)
     sys.exit(0)
+
+
+def _call(words: list[str]) -> None:
+    """Call the command that words ask for."""
+    call = plain(words)
+    if call is not None:
+        try:
+            call.function(**call.arguments)
+            return
+        except Exception as error:
+            if not hasattr(error, "exit_code"):
+                raise
+    # Help, or a fault of the call, found before anything was done.
+    from procgen.app import app
+
+    app()
 
 
 def _open_streams() -> None:
@@ -113,7 +128,7 @@ def progress(doing: str) -> Iterator[Tick | None]:
 
 
 def _stop(error: Exception) -> NoReturn:
-    if isinstance(error, (typer.Exit, typer.Abort)) or hasattr(error, "exit_code"):
+    if hasattr(error, "exit_code"):  # a fault of the call
         raise error
     if os.environ.get("PROCGEN_DEBUG") == "1":
         import traceback
@@ -121,9 +136,9 @@ def _stop(error: Exception) -> NoReturn:
         traceback.print_exc()
     if isinstance(error, BrokenPipeError):  # whoever read the output has enough
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
-        raise typer.Exit(BROKEN_PIPE) from None
+        raise SystemExit(BROKEN_PIPE) from None
     said(sentence(error))
-    raise typer.Exit(BAD_INPUT) from None
+    raise SystemExit(BAD_INPUT) from None
 
 
 def sentence(error: Exception) -> str:

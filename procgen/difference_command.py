@@ -4,9 +4,8 @@ from __future__ import annotations
 
 from typing import Annotated, Any
 
-import typer
-
 from procgen.console import guarded, printed, progress
+from procgen.declared import Argument, Option, fault
 from procgen.options import steps_of
 
 HELP: dict[str, Any] = {
@@ -20,15 +19,13 @@ WHAT = "A spec, the folder of an ensemble, or a manifest.json."
 
 @guarded
 def difference(
-    a: Annotated[str, typer.Argument(metavar="A", help=WHAT, show_default=False)],
-    b: Annotated[str | None, typer.Argument(metavar="B", help=f"{WHAT} Or --variant.", show_default=False)] = None,
-    variant: Annotated[
-        str | None, typer.Option(metavar="NAME", help="This variant of the spec A, instead of B.")
-    ] = None,
+    a: Annotated[str, Argument(metavar="A", help=WHAT, show_default=False)],
+    b: Annotated[str | None, Argument(metavar="B", help=f"{WHAT} Or --variant.", show_default=False)] = None,
+    variant: Annotated[str | None, Option(metavar="NAME", help="This variant of the spec A, instead of B.")] = None,
     at: Annotated[
-        tuple | None, typer.Option(parser=steps_of, metavar="0,10,100", help="Steps of the paired figures.")
+        tuple | None, Option(parser=steps_of, metavar="0,10,100", help="Steps of the paired figures.")
     ] = None,
-    json: Annotated[bool, typer.Option("--json", help="Print JSON instead of text.")] = False,
+    json: Annotated[bool, Option("--json", help="Print JSON instead of text.")] = False,
 ) -> None:
     """Say what differs between A and B: in meaning, by place; in values, by series; and by how much, path by path.
 
@@ -38,9 +35,9 @@ def difference(
     import procgen as pg
 
     if (b is None) == (variant is None):
-        raise typer.BadParameter("expected B, or --variant NAME of the spec A, one of them")
+        raise fault("expected B, or --variant NAME of the spec A, one of them")
     first: Any = a if variant is None else pg.load(a)
     with progress("comparing") as tick:
         found = pg.difference(first, b if variant is None else first.variant(variant), at, tick)
     printed(found.to_json() if json else found.text(), json)
-    raise typer.Exit(0 if found.equal else 1)
+    raise SystemExit(0 if found.equal else 1)

@@ -4,9 +4,8 @@ from __future__ import annotations
 
 from typing import Annotated
 
-import typer
-
 from procgen.console import guarded, printed, progress
+from procgen.declared import Argument, Option, fault
 from procgen.options import whole
 
 EXAMPLES = (
@@ -20,11 +19,11 @@ def roles_of(text: str) -> dict[str, str]:
     """Roles of columns and their names from `id=shop,time=week`."""
     pairs = [part.partition("=") for part in text.split(",")]
     if not all(role.strip() and name.strip() for role, _, name in pairs):
-        raise typer.BadParameter(f"expected ROLE=NAME, such as id=shop,time=week, got {text!r}")
+        raise fault(f"expected ROLE=NAME, such as id=shop,time=week, got {text!r}")
     roles = [role.strip() for role, _, _ in pairs]
     twice = [role for role in roles if roles.count(role) > 1]
     if twice:
-        raise typer.BadParameter(f"expected one name for {twice[0]}, got {roles.count(twice[0])}; keep one of them")
+        raise fault(f"expected one name for {twice[0]}, got {roles.count(twice[0])}; keep one of them")
     return {role.strip(): name.strip() for role, _, name in pairs}
 
 
@@ -33,22 +32,22 @@ def numbers_of(text: str) -> range:
     first, _, last = (part.strip() for part in text.partition("-"))
     last = last if "-" in text else first
     if not (first.isdecimal() and last.isdecimal() and max(len(first), len(last)) <= 15 and int(first) <= int(last)):
-        raise typer.BadParameter(f"expected numbers from 0 on, the smaller first, such as 0-99 or 7, got {text!r}")
+        raise fault(f"expected numbers from 0 on, the smaller first, such as 0-99 or 7, got {text!r}")
     return range(int(first), int(last) + 1)
 
 
 Columns = Annotated[
     dict | None,
-    typer.Option(parser=roles_of, metavar="id=NAME,…", help="Other names for id, path, step, time and value."),
+    Option(parser=roles_of, metavar="id=NAME,…", help="Other names for id, path, step, time and value."),
 ]
 
 
 @guarded
 def export(
-    source: Annotated[str, typer.Argument(metavar="OUT", help="A rendered ensemble.", show_default=False)],
+    source: Annotated[str, Argument(metavar="OUT", help="A rendered ensemble.", show_default=False)],
     out: Annotated[
         str,
-        typer.Option(
+        Option(
             "-o",
             "--out",
             metavar="FILE",
@@ -58,30 +57,28 @@ def export(
     ],
     layout: Annotated[
         str | None,
-        typer.Option(
+        Option(
             metavar="long|panel|wide|nested",
             help="A row is a path and step (when absent), an observation, a step, or a path.",
         ),
     ] = None,
-    series: Annotated[
-        str | None, typer.Option(metavar="NAME,…", help="Series, in this order; all when absent.")
-    ] = None,
+    series: Annotated[str | None, Option(metavar="NAME,…", help="Series, in this order; all when absent.")] = None,
     paths: Annotated[
         range | None,
-        typer.Option(parser=numbers_of, metavar="0-99", help="Paths by number, both included; all when absent."),
+        Option(parser=numbers_of, metavar="0-99", help="Paths by number, both included; all when absent."),
     ] = None,
     steps: Annotated[
         range | None,
-        typer.Option(parser=numbers_of, metavar="0-95", help="Steps by number, both included; all when absent."),
+        Option(parser=numbers_of, metavar="0-95", help="Steps by number, both included; all when absent."),
     ] = None,
     decimals: Annotated[
-        int | None, typer.Option(parser=whole(-22, 22), metavar="N", help="Round to so many; as stored when absent.")
+        int | None, Option(parser=whole(-22, 22), metavar="N", help="Round to so many; as stored when absent.")
     ] = None,
     local_time: Annotated[
-        bool, typer.Option("--local-time", help="Times by the clock of the spec's zone, in place of UTC.")
+        bool, Option("--local-time", help="Times by the clock of the spec's zone, in place of UTC.")
     ] = False,
     columns: Columns = None,
-    overwrite: Annotated[bool, typer.Option("--overwrite", help="Replace a file that is there.")] = False,
+    overwrite: Annotated[bool, Option("--overwrite", help="Replace a file that is there.")] = False,
 ) -> None:
     """Write the ensemble OUT, or some of it, as one file for another tool.
 

@@ -8,9 +8,8 @@ from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any
 
-import typer
-
 from procgen.console import printed, progress, said
+from procgen.declared import Option, fault
 
 if TYPE_CHECKING:
     from procgen.ensemble.expected import Expected
@@ -19,29 +18,27 @@ if TYPE_CHECKING:
 
 Variant = Annotated[
     str | None,
-    typer.Option(metavar="NAME", help="A variant that the spec has, instead of the spec as written."),
+    Option(metavar="NAME", help="A variant that the spec has, instead of the spec as written."),
 ]
 VariantOrAll = Annotated[
     str | None,
-    typer.Option(
+    Option(
         metavar="NAME|all",
         help="A variant that the spec has; all: the spec as written in OUT/base, and each variant in OUT/NAME.",
     ),
 ]
 Settings = Annotated[
     list[str] | None,
-    typer.Option(
+    Option(
         "--set",
         metavar="PLACE=VALUE",
         help="What is to stand at a place, such as series.load.ar.sd=9 or time.steps=500; may be given again.",
     ),
 ]
-Start = Annotated[
-    str | None, typer.Option("--start", metavar="DATE", help="Date and time of step 0, instead of the spec's.")
-]
+Start = Annotated[str | None, Option("--start", metavar="DATE", help="Date and time of step 0, instead of the spec's.")]
 Expect = Annotated[
     str | None,
-    typer.Option(
+    Option(
         metavar="HEX|MANIFEST",
         help="The digest it should have, or an old manifest.json (or its folder), which also tells what moved.",
     ),
@@ -56,7 +53,7 @@ def whole(least: int, most: int | None = None) -> Callable[[str], int]:
         digits = str(text).strip()
         number = int(digits) if digits.removeprefix("-").isdecimal() and len(digits) <= 400 else None
         if number is None or number < least or (most is not None and number > most):
-            raise typer.BadParameter(f"expected a whole number {span}, in digits, got {text!r}")
+            raise fault(f"expected a whole number {span}, in digits, got {text!r}")
         return number
 
     return read
@@ -71,7 +68,7 @@ def share(least: float, most: float) -> Callable[[str], float]:
         except ValueError:
             number = float("nan")
         if not least <= number <= most:
-            raise typer.BadParameter(f"expected a number from {least:g} to {most:g}, got {text!r}")
+            raise fault(f"expected a number from {least:g} to {most:g}, got {text!r}")
         return number
 
     return read
@@ -175,7 +172,7 @@ def expected(given: str, specs: dict[str, Spec]) -> Expected:
     from procgen.ensemble.expected import expected as read
 
     if len(specs) > 1:
-        raise typer.BadParameter("one digest is that of one ensemble; leave out --variant all", param_hint="--expect")
+        raise fault("one digest is that of one ensemble; leave out --variant all", where="--expect")
     return read(given)
 
 
@@ -194,5 +191,5 @@ def steps_of(text: str) -> tuple[int, ...]:
     """Steps from `0,1,10`."""
     parts = [part.strip() for part in text.split(",")]
     if not all(part.isdecimal() and len(part) <= 12 for part in parts):
-        raise typer.BadParameter(f"expected steps from 0 on, such as 0,1,10, got {text!r}")
+        raise fault(f"expected steps from 0 on, such as 0,1,10, got {text!r}")
     return tuple(int(part) for part in parts)

@@ -20,7 +20,7 @@ import pytest
 from typer.testing import CliRunner
 
 import procgen as pg
-from procgen.cli import app
+from procgen.app import app
 
 ROOT = Path(__file__).parent.parent
 PUMP = str(ROOT / "specs" / "pump-flow.yaml")

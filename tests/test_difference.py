@@ -14,7 +14,7 @@ from scipy import stats
 from typer.testing import CliRunner
 
 import procgen as pg
-from procgen.cli import app
+from procgen.app import app
 from procgen.ensemble import beside
 from procgen.ensemble.beside import Redrawn, common, firsts, side_by_side
 from procgen.ensemble.ensemble import Ensemble

@@ -24,7 +24,7 @@ from pathlib import Path
 import pytest
 from typer.testing import CliRunner
 
-from procgen.cli import app
+from procgen.app import app
 from tests.test_documents import ROOT, SIZE, shown_like, workplace
 
 PAGES = ["forecaster.md", "qa-engineer.md", "risk-analyst.md"]

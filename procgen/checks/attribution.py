@@ -12,7 +12,7 @@ from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING
 
 from procgen.checks.lifted import SCORE, Lifted
-from procgen.checks.words import FARTHEST, FARTHEST_SHOCK, SCATTER, START, is_signed, of_stays, sort_of
+from procgen.checks.words import FARTHEST, FARTHEST_SHOCK, LED, SCATTER, START, is_signed, of_stays, sort_of
 
 if TYPE_CHECKING:
     from procgen.checks.verdict import Check
@@ -21,10 +21,12 @@ _WHOLE_LAW = (
     "law", "shocks: distribution function", "shocks: within the law's ends", "share below", "share of", FARTHEST,
     FARTHEST_SHOCK,
 )  # fmt: skip
+_LEVEL = 0.001  # at which what copies make would be no departure
 _SHAPE = "shocks: shape of the law"
 _PRODUCTS = ("shocks: autocorrelation", "shocks: neighbouring paths", "shocks: correlation between series")
 _SIZES = ("shocks: variance", "shocks: spread score")
 _LIKE = 0.5  # share of the shocks' log variance that the values' must show to be called a matter of spread
+_LED = 0.2  # share of the gain by the law and size of ranks that their memory must have, to be behind these
 _FAR = 1.0  # a shift of the shocks, in their sd, that a bounded score of their spread sees as spread
 
 Groups = list[list["Check"]]
@@ -40,8 +42,17 @@ def departures(rows: Sequence[Check]) -> list[Groups]:
     for row in rows:
         series.setdefault(row.series, []).append(row)
     sizes = {name: _size(mine) for name, mine in series.items()}
-    found = [_of_series(mine, sizes) for mine in series.values() if any(row.outcome == "departs" for row in mine)]
-    found = [part for groups in found for part in _structure_apart(groups)]
+    copied = _of_copies(rows)
+    found: list[Groups] = []
+    for mine in series.values():
+        facts = [row for row in mine if row.outcome == "departs" and sort_of(row) == "structure"]
+        told = copied.keys() | {id(row) for row in facts}
+        rest = [row for row in mine if id(row) not in told]
+        found += [_by_kind(facts, sizes)] if facts else []
+        found += [_of_series(rest, sizes)] if any(row.outcome == "departs" for row in rest) else []
+    for groups in found:
+        behind = next((row for row in groups[0] if row.copied is not None), None)
+        groups += _by_kind([row for of, row in copied.values() if of is behind], sizes)
     return sorted(found, key=lambda groups: (groups[0][0].kind != "structure", -_largest(groups, sizes)))
 
 
@@ -49,10 +60,32 @@ def _largest(groups: Groups, sizes: Mapping[str, float]) -> float:
     return max(_gain(group[0], sizes) for group in groups)
 
 
-def _structure_apart(groups: Groups) -> list[Groups]:
-    facts = [group for group in groups if sort_of(group[0]) == "structure"]
-    rest = [group for group in groups if sort_of(group[0]) != "structure"]
-    return [part for part in (facts, rest) if part]
+def _of_copies(rows: Sequence[Check]) -> dict[int, tuple[Check, Check]]:
+    """What follows from paths that are copies of each other: id of a row -> the row that tells of them, and it.
+
+    A kind of departure in a series does, or does not, as a whole.
+    """
+    tells = {row.series: row for row in rows if row.copied is not None and row.outcome == "departs"}
+    if not tells:
+        return {}
+    needed = math.log(sum(row.log_p is not None for row in rows) or 1) - math.log(_LEVEL)
+    found, others = {}, set()
+    for row in rows:
+        behind = [tells[name] for name in row.series.split(" ~ ") if name in tells]
+        both = len(behind) == len(row.series.split(" ~ "))
+        if both and all(one.copied is not None and one.copied.explains(row, needed) for one in behind):
+            found[id(row)] = behind[0], row
+        elif row.outcome == "departs":
+            others.add((row.series, sort_of(row)))
+    mine = {key: pair for key, pair in found.items() if (pair[1].series, sort_of(pair[1])) not in others}
+    return {key: (behind, row) for key, (behind, row) in mine.items() if row.outcome == "departs"}
+
+
+def _by_kind(rows: Sequence[Check], sizes: Mapping[str, float]) -> Groups:
+    kinds: dict[tuple[str, str], list[Check]] = {}
+    for row in sorted(rows, key=lambda row: -_gain(row, sizes)):
+        kinds.setdefault((row.series, sort_of(row)), []).append(row)
+    return list(kinds.values())
 
 
 def _of_series(rows: Sequence[Check], sizes: Mapping[str, float]) -> Groups:
@@ -64,7 +97,7 @@ def _of_series(rows: Sequence[Check], sizes: Mapping[str, float]) -> Groups:
     if stays:  # a series of states is judged by them: all else that is off about it follows
         kinds["memory"] = stays + [row for row in kinds["memory"] if not of_stays(row)]
         return [kinds[kind] for kind in sorted(kinds, key=lambda kind: (kind != FARTHEST, kind != "memory"))]
-    follows = _following(rows, kinds) | _lifted(rows, kinds, sizes)
+    follows = _following(rows, kinds) | _lifted(rows, kinds, sizes) | _led(kinds)
     order = sorted(kinds, key=lambda kind: (kind != FARTHEST, kind in follows, -_gain(kinds[kind][0], sizes)))
     if order:
         behind = _BEHIND.get(order[0], _nothing)(rows, kinds)
@@ -132,6 +165,16 @@ def _lifted(rows: Sequence[Check], kinds: Mapping[str, list[Check]], sizes: Mapp
     return {kind for kind, group in more.items() if group and all(lifted.explains(row) for row in group)}
 
 
+def _led(kinds: Mapping[str, list[Check]]) -> set[str]:
+    """Kinds of ranks alone that a memory explains: where it is off, ranks given the past have other sizes, too."""
+    led = max((-(row.log_p or 0.0) for row in kinds.get("memory", ()) if row.what == LED), default=0.0)
+    return {
+        kind
+        for kind in kinds.keys() & {"law", "spread", "clustering"}
+        if all(row.what.startswith("shocks: ") and _LED * -(row.log_p or 0.0) <= led for row in kinds[kind])
+    }
+
+
 def _nothing(rows: Sequence[Check], kinds: Mapping[str, list[Check]]) -> str | None:
     return None
 
@@ -155,7 +198,7 @@ def _behind_spread(rows: Sequence[Check], kinds: Mapping[str, list[Check]]) -> s
 def _behind_memory(rows: Sequence[Check], kinds: Mapping[str, list[Check]]) -> str | None:
     """Spread, where the slope on earlier steps has changed only because more, or less, of the variance is noise."""
     variance, slope = _moved(rows, "variance over steps"), _moved(rows, "slope over steps")
-    if "spread" not in kinds or variance is None or slope is None or _turned(rows):
+    if "spread" not in kinds or variance is None or slope is None or _turned(rows) or "spread" in _led(kinds):
         return None
     return "spread" if abs(slope + variance) < _LIKE * abs(variance) else None
 

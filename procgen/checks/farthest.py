@@ -18,7 +18,7 @@ from procgen.checks import judge
 from procgen.checks.judge import Finding
 from procgen.checks.scores import Scores
 from procgen.checks.verdict import Check
-from procgen.checks.words import FARTHEST_SHOCK, number
+from procgen.checks.words import CUT, FARTHEST_SHOCK, number
 
 KEPT = 32  # shocks of a series
 LEAST = 3.0  # normal scores, below which a shock is of no interest
@@ -111,7 +111,7 @@ def _cut(series: str, log_p: float, size: float, n: int) -> Check:
     check = Check.of(series, FARTHEST_SHOCK, "all steps", "law", finding)
     if log_p < _OUTSIDE:
         check.note = (
-            f"tails are cut: of {n:,} shocks none is farther out than {number(size, 3)} sd of a normal law, where "
+            f"{CUT}: of {n:,} shocks none is farther out than {number(size, 3)} sd of a normal law, where "
             f"{number(least, 3)} is to be expected"
         )
     return check

@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 
 from procgen.checks import missing, waves
 from procgen.checks.errors import ErrorSums
+from procgen.checks.led import LedSums, led
 from procgen.checks.neighbours import Neighbours
 from procgen.checks.probes import CrossPlan, SeriesPlan
 from procgen.checks.recover import Cannot, Expected, Route, dither
@@ -146,6 +147,8 @@ class Gather:
         self.events = {name: EventSums(way.watched) for name, way in self.routes.items() if way.watched}
         self.events |= missing.sums(plan.gaps)
         self.squares = {name: each.sums() for name, each in plan.squares.items()}
+        ways = [(s, self.routes[s.name]) for s in plan.series if s.name in self.routes]
+        self.led = {s.name: LedSums(s.theory, plan.steps, f"{s.name}{way.salt} led") for s, way in ways if led(s, way)}
         few = len(plan.shock_pairs) <= FEW_PAIRS
         self.cross = {pair: sums_of(stated, few) for pair, stated in plan.shock_pairs.items()}
 
@@ -188,7 +191,7 @@ class Gather:
         for name, gap in other.gaps.items():
             self.gaps[name] = max(self.gaps.get(name, gap), gap)
         self.stopped |= other.stopped
-        for kind in ("shocks", "errors", "events", "squares", "cross"):
+        for kind in ("shocks", "errors", "events", "squares", "led", "cross"):
             for key, sums in getattr(self, kind).items():
                 sums.merge(getattr(other, kind)[key])
 
@@ -239,6 +242,7 @@ class Gather:
         found += [getattr(powers, name) for powers in self._powers() for name in ("n", "sums", "pairs", "ends")]
         found += [getattr(s, name) for s in self.shocks.values() for name in SHOCK_ARRAYS]
         found += [each.sums for each in self.events.values()]
+        found += [each.sums for each in self.led.values()]
         found += [sums for c in self.cross.values() for sums in c.sums.values()]
         return [values for values in found if values.dtype == kind]
 

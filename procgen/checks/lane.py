@@ -69,6 +69,7 @@ class Lane:
         self.errors = {name: sums.lane(paths) for name, sums in self.sums.errors.items()}
         self.events = {name: sums.lane(paths) for name, sums in self.sums.events.items()}
         self.squares = {name: sums.lane(paths) for name, sums in self.sums.squares.items()}
+        self.led = {name: sums.lane(paths, first_path) for name, sums in self.sums.led.items()}
         self.pairs = Pairs(self.sums.cross, paths)
         self.cross = self.pairs.totals
 
@@ -136,6 +137,9 @@ class Lane:
                 sums.events[plan.name].absorb(self.carriers[plan.name].seen, self.step, self.events[plan.name])
             if plan.name in sums.shocks:
                 sums.shocks[plan.name].absorb(z, self.step, self.shocks[plan.name], x)
+                if plan.name in sums.led:
+                    view = self.shocks[plan.name].view
+                    sums.led[plan.name].absorb(x, view[max(len(view) - len(x), 0) :], self.step, self.led[plan.name])
             else:
                 sums.errors[plan.name].absorb(z, self.errors[plan.name])
         return x
@@ -160,7 +164,7 @@ class Lane:
             early = [each.differences() for each in self.early.values()]
             scatter = np.array(early).reshape(len(early), self.paths).T
             self.sums.finish_lane(self.first_path, self.probes, pools, self.prints.T.copy(), related, scatter)
-        for kind in ("shocks", "errors", "events", "squares", "cross"):
+        for kind in ("shocks", "errors", "events", "squares", "led", "cross"):
             for key, sums in getattr(self.sums, kind).items():
                 sums.finish(getattr(self, kind)[key])
         return self.sums

@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 from procgen.chance.kernel import is_compiling
 from procgen.checks import copies, extremes, grids, support
 from procgen.checks.blocks import in_few, in_one_pass
+from procgen.checks.copied import Copied
 from procgen.checks.prints import equal, fingerprint, weights
 from procgen.checks.verdict import Check
 from procgen.checks.words import many, number
@@ -314,8 +315,9 @@ class Structure:
             if copies:
                 many = f"{copies} paths repeat another one" if copies > 1 else "one path repeats another one"
                 fault = f"{many} bit for bit, such as paths {first} and {second}"
-            yield Check.fact(what.name, "copied paths", "all pairs", fault, "no two paths are the same")
-
+            check = Check.fact(what.name, "copied paths", "all pairs", fault, "no two paths are the same")
+            check.copied = Copied.of(prints[:, column]) if copies else None
+            yield check
 
     def _repeats(self, marked: Container[str]) -> Iterator[Check]:
         """Whether values repeat; in `marked` series one value stands for what is missing, which is told already.

@@ -302,6 +302,8 @@ def _shocks(gather: Gather, name: str) -> Iterator[Check]:
         yield Check(name, "recovered shocks", "", "law", outcome="untestable", note=_none_recovered(way, gather))
         return
     yield from shock_checks(name, sums, way.words)
+    if name in gather.led:
+        yield from gather.led[name].checks(name)
     ranks = way.ranked is not None or way.few is not None
     yield from farthest.checks(name, sums.scores, sums.far, sums.n, noise, ranks)
     points = getattr(sums.scores.law, "points", None) is not None or lumpy(way.theory)

@@ -18,6 +18,7 @@ from procgen.checks.judge import Finding
 
 if TYPE_CHECKING:
     from procgen.checks.common import Told
+    from procgen.checks.copied import Copied
 
 USUAL = 0.001  # chance of a false alarm
 KINDS = ("structure", "level", "spread", "memory", "clustering", "law", "dependence")
@@ -55,6 +56,7 @@ class Check:
     note: str = ""
     finding: Finding | None = None
     detectable: float | None = None
+    copied: Copied | None = None  # of paths that are copies of each other: what they make of all else
 
     @classmethod
     def of(cls, series: str, what: str, probe: str, kind: str, finding: Finding, note: str = "") -> Check:

@@ -33,6 +33,7 @@ _MORE_LESS = {"level": ("higher than", "lower than"), "spread": ("larger than", 
 _SIGNED = ("mean", "variance", "level score", "spread score")  # how the checks end whose sign says more or less
 BALANCE = "shocks: balance of paths"
 BY_PHASE = "shocks: level by phase"
+LED = "shocks: slope on the value before"
 COSINES, SINES = "mean cosine of values", "mean product of sines of values"
 START, SCATTER = "size of the start", "scatter of the start"
 _BETWEEN_PATHS = ("neighbouring paths", BALANCE)  # how the checks end
@@ -64,6 +65,7 @@ _CORRELATIONS = {
 _DRAWN = ": distribution function"  # how the check of a drawn parameter ends
 FARTHEST, FARTHEST_SHOCK = "farthest value", "shocks: farthest"
 _STAYS = re.compile(r"share: (.+) after \1, (up to \d+ steps?|longer)")
+CUT = "tails are cut"  # how the note of a shock begins that is the farthest, and not far
 CONTINUED, SHIFTED = "end of a path and start of the next", "values some paths apart"  # as `ordered` has them
 GAP, TOGETHER = " of the gap", " of the sum"  # how the checks of a combination of series end, as `relations` has them
 _ALL_DIGITS = 17  # that tell any two numbers apart
@@ -169,7 +171,11 @@ def sentence(groups: list[list[Check]]) -> str:
 
 def effects(groups: list[list[Check]]) -> list[str]:
     """The sorts of departure that may follow from the first one, where that is no fact which says it all."""
-    return [] if _of_a_fact(groups[0][0]) else [sort_of(group[0]) for group in groups[1:]]
+    top = groups[0][0]
+    if _of_a_fact(top) and top.kind != "structure":
+        return []
+    other = ((group[0].series, sort_of(group[0])) for group in groups[1:])
+    return [sort if series == top.series else f"{sort} of {joined(series.split(' ~ '))}" for series, sort in other]
 
 
 def cause(first: list[Check]) -> str:

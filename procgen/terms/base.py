@@ -118,6 +118,7 @@ class Term:
     portable: ClassVar[bool] = True
     why_not_portable: ClassVar[str] = ""
     longest: ClassVar[int | None] = None  # the most steps it can be drawn for; None when any number
+    fewer: ClassVar[str] = "ask for fewer"  # what to do where more are asked for
     no_past: ClassVar[str] = ""  # why there is less before step 0 than is read, and what to do; where not `before`
 
     told: tuple[float, float] = (-np.inf, np.inf)  # values of its body beyond which double precision tells no two apart
@@ -188,6 +189,11 @@ class Term:
         A term with hidden outputs returns a dict: its values under ``""`` and each output by name.
         """
         raise NotImplementedError
+
+    @property
+    def undoes(self) -> bool:
+        """Whether `invert` has an answer."""
+        return type(self).invert is not Term.invert
 
     def invert(self, values: Array, known: Sequence[Array | None], state: State | None, at: Array):
         """The one unknown input (None in `known`) from the values; NaN where the unknown past matters."""

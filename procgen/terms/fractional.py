@@ -7,14 +7,14 @@ The weights of a fractional sum, ψ_j = Γ(j + d)/(Γ(d) Γ(j + 1)), are a mixtu
 which the trapezoidal rule in log λ gives to e^{−π²/h}. So the sum is one over a fixed set of modes, autoregressions of
 order one of the same shocks, whatever the number of steps. Those too slow to move in 1e9 steps are one mode that loses
 nothing. Their past is drawn from its joint Gaussian law in closed form. The covariances are those of the ideal process
-within 1e-11 of its variance.
+within 1e-11 of its variance. By `method: exact` they are those to rounding, 1e-12 of them at most (`terms/exact.py`),
+for no more than 10,000 steps.
 """
 
 from __future__ import annotations
 
 from dataclasses import dataclass
 from functools import lru_cache
-from threading import local
 from typing import ClassVar
 
 import numpy as np
@@ -23,9 +23,10 @@ from procgen.chance.gamma import log_gamma
 from procgen.chance.kernel import is_compiling, kernel
 from procgen.chance.laws import Normal
 from procgen.chance.portable import exp, log, lost, sin_turns
-from procgen.spec.declare import Parameter, Real, Reals
+from procgen.spec.declare import Choice, Parameter, Real, Reals
 from procgen.terms.arma import not_causal, recursion
 from procgen.terms.base import SD, TOTAL_SD, Ahead, Draw, Term, number, signed
+from procgen.terms.exact import LONGEST_EXACT, NARROW, Exact, Predictors, added
 from procgen.terms.start import companion, decay_length, partial_autocorrelations
 
 NORMAL = Normal()
@@ -37,7 +38,6 @@ TOGETHER = (
     "for a correlation of ρ at every lag add √ρ times one under shared: to √(1 − ρ) times its own in each series"
 )
 SMOOTH = 12  # beyond this lag a second difference of a power is taken by its series
-NARROW = 64  # paths, from which on a call for each step before costs less than all of them at once
 
 
 @kernel
@@ -145,8 +145,8 @@ def _burn(phi, theta):
     return len(theta) + (decay_length(companion(phi, (), len(phi), 0)[0]) if phi else 0)
 
 
-def _variance(d, phi, theta):
-    """The variance of the filtered fractional sum of shocks of sd 1: autocovariances of both, multiplied."""
+def _filter_covariances(phi, theta):
+    """Autocovariances of the filter of unit white noise at lags 0, 1, … until they are forgotten."""
     count = 2 * _burn(phi, theta) + 1
     pulse, psi = np.zeros((len(theta) + count, 1)), np.zeros((len(phi) + count, 1))
     pulse[len(theta)] = 1.0
@@ -154,11 +154,35 @@ def _variance(d, phi, theta):
     weights, gamma = psi[len(phi) :, 0], np.zeros(count)
     for j, weight in enumerate(weights.tolist()):
         gamma[: count - j] = gamma[: count - j] + weight * weights[j:]
+    return gamma
+
+
+def _memory(d, count):
+    """Autocorrelations of the fractional sum at lags 0 … count − 1 (Hosking 1981)."""
     lags = np.arange(1.0, count)
-    memory = np.append(1.0, np.multiply.accumulate((lags - 1.0 + d) / (lags - d)))
-    products = gamma * memory
+    return np.append(1.0, np.multiply.accumulate((lags - 1.0 + d) / (lags - d)))
+
+
+def _variance(d, phi, theta):
+    """The variance of the filtered fractional sum of shocks of sd 1: autocovariances of both, multiplied."""
+    gamma = _filter_covariances(phi, theta)
+    products = gamma * _memory(d, len(gamma))
     whole = products[0] + 2.0 * added(products[1:])
     return whole * float(exp(log_gamma(1.0 - 2.0 * d) - 2.0 * log_gamma(1.0 - d)))
+
+
+@lru_cache(maxsize=8)
+def _predictors(d, phi, theta):
+    """Of the filtered fractional sum: its autocovariances are the convolution of both (Doornik & Ooms 2003)."""
+    filtered = _filter_covariances(phi, theta).tolist()
+    count = len(filtered)
+    memory = _memory(d, LONGEST_EXACT + count)
+    both, total = np.concatenate([memory[count - 1 : 0 : -1], memory]), np.zeros(LONGEST_EXACT)
+    for j in range(count - 1, 0, -1):  # the smallest first
+        near, far = count - 1 - j, count - 1 + j
+        total = total + filtered[j] * (both[near : near + LONGEST_EXACT] + both[far : far + LONGEST_EXACT])
+    total = total + filtered[0] * memory[:LONGEST_EXACT]
+    return Predictors(total / total[0])
 
 
 class Arfima(Term):
@@ -177,7 +201,21 @@ class Arfima(Term):
         Parameter("theta", "θ", Reals(), "coefficients of the fractional sum one, two, … steps ago", default=()),
         SD,
         TOTAL_SD,
+        Parameter(
+            "method",
+            "",
+            Choice("mixture", "exact"),
+            "how it is drawn: as a mixture of exponentials, for any number of steps, with autocovariances within 1e-11 "
+            f"of the variance; or each value from all before it, with exact ones, for at most {LONGEST_EXACT:,} steps "
+            "and at a cost that grows with their square (Durbin 1960; Levinson 1947)",
+            default="mixture",
+        ),
     )
+
+    def __init__(self, values):
+        super().__init__(values)
+        if self._is_exact:
+            self.longest, self.fewer = LONGEST_EXACT, "ask for fewer, or leave out `method: exact`"
 
     @classmethod
     def check(cls, values):
@@ -199,10 +237,24 @@ class Arfima(Term):
     def past(self):
         return 0
 
+    @property
+    def _is_exact(self):
+        return self.method == "exact"
+
+    def exact(self):
+        """What draws it by `method: exact`."""
+        if self.total_sd is not None:
+            sd = self.total_sd
+        else:
+            sd = self.sd * float(np.sqrt(_variance(self.d, self.phi, self.theta)))
+        return Exact(_predictors(self.d, self.phi, self.theta), sd)
+
     def reach(self, head):
-        return (_burn(self.phi, self.theta),)
+        return (0 if self._is_exact else _burn(self.phi, self.theta),)
 
     def begin(self, before):
+        if self._is_exact:
+            return None, self.exact().begin()
         modes = modes_of(self.d)
         state = {"modes": self.shock_sd() * modes.past(before.normals(len(modes.weights)))}
         state |= {"x": np.zeros((len(self.phi), 1)), "f": np.zeros((len(self.theta), 1))}
@@ -212,7 +264,16 @@ class Arfima(Term):
         return None, state
 
     def recurse(self, inputs, state, at):
+        if self._is_exact:
+            return self.exact().draw(inputs[0], state)
         return self._filter(self.shock_sd() * inputs[0], state)
+
+    @property
+    def undoes(self):
+        return self._is_exact
+
+    def invert(self, values, known, state, at):
+        return self.exact().undo(values, state)
 
     def _filter(self, a, state):
         modes, p, q = modes_of(self.d), len(self.phi), len(self.theta)
@@ -224,6 +285,8 @@ class Arfima(Term):
         return x[p:], {"modes": kept, "x": x[len(x) - p :].copy(), "f": f[len(f) - q :].copy()}
 
     def ahead(self, steps, state, noise):
+        if self._is_exact:
+            return self.exact().ahead(len(steps), state)
         mean, _ = self._filter(np.zeros((len(steps), state["modes"].shape[1])), state)
         pulse = np.zeros((len(steps), 1))
         pulse[:1] = self.shock_sd()
@@ -236,65 +299,14 @@ class Arfima(Term):
     def equation(self, *inputs):
         left = "".join(f" {signed(-c, f'x[t−{i}]')}" for i, c in enumerate(self.phi, start=1))
         right = "".join(f" {signed(c, f'f[t−{j}]')}" for j, c in enumerate(self.theta, start=1))
-        return f"x[t]{left} = f[t]{right},  (1 − B)^{number(self.d)} f[t] = a[t],  sd a = {number(self.shock_sd())}"
-
-
-@kernel
-def predict(weights, past, z, out):
-    """out = z + Σ weights[j] past[−1−j]."""
-    n = weights.shape[0]
-    x = z[0]
-    for j in range(n):
-        x = x + weights[j] * past[n - 1 - j]
-    out[0] = x
-
-
-def predicted(weights, past, z, out):
-    """`predict`, where few paths are not compiled by one call for all steps before: the same sums in the same order."""
-    if past.shape[1] >= NARROW or is_compiling():
-        predict(weights, past, z, out)
-    else:
-        out[:] = np.add.accumulate(np.concatenate([z, weights[:, None] * past[::-1]]), axis=0)[-1]
-
-
-class Predictors(local):
-    """Best linear predictors of fractional Gaussian noise from all t values before (Durbin 1960; Levinson 1947).
-
-    Each thread has weights of its own, as each is at a step of its own.
-    """
-
-    def __init__(self, hurst):
-        self.gamma = _fractional_gaussian(hurst, FractionalGaussianNoise.longest)
-        self._restart()
-
-    def _restart(self):
-        self.weights, self.variance = np.zeros(0), 1.0
-
-    def at(self, t):
-        """The weights of the last t values, newest first, and the standard deviation of what is new; sd 1."""
-        if t < len(self.weights):
-            self._restart()
-        while len(self.weights) < t:
-            known = len(self.weights)
-            missed = self.gamma[known + 1] - added(self.weights * self.gamma[known:0:-1])
-            partial = missed / self.variance
-            self.weights = np.append(self.weights - partial * self.weights[::-1], partial)
-            self.variance = self.variance * (1.0 - partial * partial)
-        return self.weights, float(np.sqrt(self.variance))
+        drawn = ",  drawn from its exact autocovariances" if self._is_exact else ""
+        sum_of_shocks = f"(1 − B)^{number(self.d)} f[t] = a[t],  sd a = {number(self.shock_sd())}"
+        return f"x[t]{left} = f[t]{right},  {sum_of_shocks}{drawn}"
 
 
 @lru_cache(maxsize=8)
-def predictors_of(hurst):
-    return Predictors(hurst)
-
-
-def added(values):
-    """The sum of a vector, halves onto halves: an order that is the same everywhere."""
-    while len(values) > 1:
-        half = len(values) // 2
-        rest = values[2 * half :]
-        values = np.append(values[:half] + values[half : 2 * half], rest)
-    return float(values[0]) if len(values) else 0.0
+def _predictors_of_noise(hurst):
+    return Predictors(_fractional_gaussian(hurst, LONGEST_EXACT))
 
 
 def _fractional_gaussian(hurst, longest):
@@ -320,7 +332,7 @@ class FractionalGaussianNoise(Term):
     source = "Mandelbrot & Van Ness (1968); drawn by the recursion of Durbin (1960) and Levinson (1947)"
     example = "fractional_gaussian_noise: {hurst: 0.7, sd: 1}"
     knows = "autocovariance at any lag; Gaussian law; strictly stationary"
-    longest = 10_000
+    longest = LONGEST_EXACT
     together = TOGETHER
     no_past = "it is drawn from step 0 on, each value from all before; lag less"
     parameters: ClassVar[tuple[Parameter, ...]] = (
@@ -334,33 +346,20 @@ class FractionalGaussianNoise(Term):
     def past(self):
         return 0
 
+    def exact(self):
+        return Exact(_predictors_of_noise(self.hurst), self.sd)
+
     def begin(self, before):
-        return None, {"x": np.zeros((0, 1))}
+        return None, self.exact().begin()
 
     def recurse(self, inputs, state, at):
-        z, past = self.sd * inputs[0], state["x"]
-        x = np.empty((len(past) + len(z), max(z.shape[1], past.shape[1] if len(past) else 1)))
-        x[: len(past)] = past
-        for t in range(len(past), len(x)):
-            weights, spread = predictors_of(self.hurst).at(t)
-            predicted(weights, x[:t], spread * z[t - len(past) : t - len(past) + 1], x[t : t + 1])
-        return x[len(past) :].copy(), {"x": x}
+        return self.exact().draw(inputs[0], state)
 
     def invert(self, values, known, state, at):
-        past = state["x"] if state else np.zeros((0, values.shape[1]))
-        x, out = np.concatenate([past, values]), np.empty_like(values)
-        for t in range(len(past), len(x)):
-            weights, spread = predictors_of(self.hurst).at(t)
-            row = out[t - len(past) : t - len(past) + 1]
-            predicted(-weights, x[:t], x[t : t + 1], row)
-            row /= spread * self.sd
-        return out, {"x": x}
+        return self.exact().undo(values, state)
 
     def ahead(self, steps, state, noise):
-        flat = np.zeros((len(steps), max(1, state["x"].shape[1])))
-        mean, _ = self.recurse((flat,), state, steps)
-        psi, _ = self.recurse((np.eye(len(steps)),), {"x": np.zeros((len(state["x"]), len(steps)))}, steps)
-        return Ahead(mean, (psi * psi) @ np.ones((len(steps), 1)))
+        return self.exact().ahead(len(steps), state)
 
     def moments(self, axis, *inputs):
         return axis.fractional_gaussian(axis.source(self.address, NORMAL, 1.0), self.hurst, self.sd)

@@ -212,7 +212,7 @@ class Graph:
         steps = self.spec.time.steps * pace
         if term.longest is None or steps <= term.longest:
             return None
-        return f"expected at most {term.longest:,} steps with {term.kind}, got {steps:,}; ask for fewer"
+        return f"expected at most {term.longest:,} steps with {term.kind}, got {steps:,}; {term.fewer}"
 
     def _shock(self, entry: Entry, term: Term, owner: str) -> Node:
         if entry.shock is not None:

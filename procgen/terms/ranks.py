@@ -11,7 +11,7 @@ from typing import Any
 
 import numpy as np
 
-from procgen.terms.base import Array, Node, Term, Unknown
+from procgen.terms.base import Array, Node, Unknown
 from procgen.terms.combine import Hidden
 from procgen.terms.graph import Graph, Source
 from procgen.terms.hidden_states import hidden_states
@@ -58,7 +58,7 @@ def _of_hidden_states(graph: Graph, series: str, whole: bool, grain: float) -> R
 def _undone(graph: Graph, node: Node) -> int | None:
     """Which input comes out where a node is undone: the only one that moves by chance; None where it cannot be."""
     random = [i for i, part in enumerate(node.inputs) if sources_below(graph, part)]
-    return None if len(random) != 1 or type(node.term).invert is Term.invert else random[0]
+    return None if len(random) != 1 or not node.term.undoes else random[0]
 
 
 def _blurring(chain: list[tuple[Node, int]], whole: bool) -> list[str]:

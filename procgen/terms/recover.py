@@ -10,7 +10,7 @@ from typing import Any
 
 import numpy as np
 
-from procgen.terms.base import Ahead, Array, Node, Term, Unknown
+from procgen.terms.base import Ahead, Array, Node, Unknown
 from procgen.terms.graph import Graph, Source
 from procgen.terms.run import Run, within
 
@@ -30,7 +30,7 @@ def recovery(graph: Graph, series: str, paths: int) -> Recovery | Unknown:
         random = [i for i, part in enumerate(node.inputs) if found[0] in sources_below(graph, part)]
         if len(random) != 1:
             return Unknown(f"{node.name} reads the same shocks in {len(random)} places")
-        if type(node.term).invert is Term.invert:
+        if not node.term.undoes:
             return Unknown(f"{node.name} ({node.term.kind or 'hidden output'}) cannot be undone")
         chain.append((node, random[0]))
         node = node.inputs[random[0]]

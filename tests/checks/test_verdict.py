@@ -241,7 +241,7 @@ def test_a_pipeline_may_insist_that_all_was_judged(options, code, tmp_path):
     """Of a garch of few steps, what came before step 0 cannot be forgotten: its clustering and law are not judged."""
     from typer.testing import CliRunner
 
-    from procgen.cli import app
+    from procgen.app import app
 
     body = [{"garch": {"omega": 0.05, "alpha": 0.1, "beta": 0.85}}]
     raw = {"procgen": 1, "seed": 3, "paths": 600, "time": {"steps": 60}, "series": {"x": body}}

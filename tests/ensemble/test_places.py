@@ -163,7 +163,7 @@ def test_urls_that_lead_nowhere():
 def test_commands_read_an_ensemble_from_a_store_and_say_where_there_is_none(bucket, tmp_path):
     from typer.testing import CliRunner
 
-    from procgen.cli import app
+    from procgen.app import app
 
     raw = {"seed": 3, "paths": 40, "time": {"steps": 20}, "series": {"x": [{"ar": {"phi": 0.5, "sd": 1}}]}}
     url, none = bucket("runs/drawn"), bucket("runs/none")

@@ -10,7 +10,7 @@ import yaml
 from typer.testing import CliRunner
 
 import procgen as pg
-from procgen.cli import app
+from procgen.app import app
 from procgen.ensemble.columns import store
 from procgen.terms.labels import labelled
 

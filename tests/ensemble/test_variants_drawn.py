@@ -6,7 +6,7 @@ import pytest
 from typer.testing import CliRunner
 
 import procgen as pg
-from procgen.cli import app
+from procgen.app import app
 from procgen.ensemble import plan
 
 SPEC = """procgen: 1

@@ -6,7 +6,7 @@ import numpy as np
 from typer.testing import CliRunner
 
 import procgen as pg
-from procgen.cli import app
+from procgen.app import app
 from tests.hostile.commands import HEAD
 
 

@@ -9,7 +9,7 @@ import pytest
 from typer.testing import CliRunner
 
 import procgen as pg
-from procgen.cli import app
+from procgen.app import app
 from procgen.spec import pages
 from procgen.spec.pages import Bomb, read_within, refuse_bombs
 from tests.hostile.commands import HEAD_RAW

@@ -8,8 +8,8 @@ import pytest
 from typer.testing import CliRunner
 
 import procgen as pg
+from procgen.app import app
 from procgen.chance.laws import LAWS
-from procgen.cli import app
 from procgen.report.letters import tame
 from procgen.spec.reader import read_text
 from procgen.terms import catalogue

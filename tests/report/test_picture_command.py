@@ -14,7 +14,7 @@ import pytest
 from typer.testing import CliRunner
 
 import procgen as pg
-from procgen.cli import app
+from procgen.app import app
 from procgen.report.html import verdict_page
 from procgen.report.pictures.write import PictureError, is_ours, place_for
 from tests.report.pages import drawing, self_contained

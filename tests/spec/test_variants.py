@@ -12,8 +12,8 @@ from jsonschema import Draft202012Validator
 from typer.testing import CliRunner
 
 import procgen as pg
+from procgen.app import app
 from procgen.chance.laws import LAWS
-from procgen.cli import app
 from procgen.report.schema import schema
 from procgen.spec.places import Nowhere, plain_at, put, steps_of
 from procgen.spec.reader import settable

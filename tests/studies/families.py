@@ -286,6 +286,7 @@ FAMILIES: Mapping[str, Any] = {
         "series": {
             "a": [{"arfima": {"d": 0.3, "phi": 0.4, "sd": 1}}],
             "b": [{"fractional_gaussian_noise": {"hurst": 0.7, "sd": 1}}, {"given": {"values": [3, 5, 4], **_REPEAT}}],
+            "c": [{"arfima": {"d": 0.3, "phi": 0.4, "sd": 1, "method": "exact"}}],
         }
     },
     "vectors": {
@@ -379,7 +380,7 @@ OFTEN = (
     "white noise", "walk", "ar", "seasonal", "rounded", "student", "laplace", "garch", "lognormal", "product",
     "garch in noise", "stochastic volatility", "regimes", "skewed sums",
 )  # fmt: skip
-LONGEST = {"long memory": 10_000}  # fractional Gaussian noise is drawn for no more steps
+LONGEST = {"long memory": 10_000}  # what is drawn exactly is drawn for no more steps
 
 
 def stated(family: str, steps: int) -> Any:

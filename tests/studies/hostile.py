@@ -194,7 +194,7 @@ class Bench:
     def run(self, command: list[str]) -> Iterator[str]:
         from typer.testing import CliRunner
 
-        from procgen.cli import app
+        from procgen.app import app
 
         EVENTS.clear()
         begin = time.process_time()

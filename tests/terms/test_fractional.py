@@ -2,19 +2,25 @@
 
 import mpmath
 import numpy as np
+import pandas as pd
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy.linalg import cholesky, toeplitz
+from statsmodels.tsa.arima_process import arma_acovf
+from statsmodels.tsa.stattools import levinson_durbin
 
+import procgen as pg
 from procgen.chance.kernel import available, compiling
 from procgen.spec.model import SpecError
-from procgen.terms import fractional
-from procgen.terms.fractional import modes_of, predictors_of, remember, remembered
+from procgen.terms.exact import predict, predicted
+from procgen.terms.fractional import _predictors, modes_of, remember, remembered
+from procgen.terms.fractional import _predictors_of_noise as predictors_of
+from procgen.terms.recover import recovery
 from procgen.theory import theory
 from procgen.theory.fractional import Filtered, FractionalNoise, GaussianNoise
 
-from .helpers import draw, graph_of
+from .helpers import draw, graph_of, jacobian
 
 DERIVED = {
     "arfima": "test_autocovariances_against_many_digits",
@@ -129,7 +135,8 @@ def test_the_predictors_are_the_inverse_of_a_cholesky_factor():
 
 @pytest.mark.skipif(not available(), reason="the speed extra is not installed")
 def test_compiled_and_plain_draw_the_same_bits_over_many_tiles():
-    graph = graph_of("  x: {arfima: {d: 0.4, phi: 0.5, sd: 1}}\n  y: {fractional_gaussian_noise: {hurst: 0.9, sd: 1}}")
+    graph = graph_of("  x: {arfima: {d: 0.4, phi: 0.5, sd: 1}}\n  y: {fractional_gaussian_noise: {hurst: 0.9, sd: 1}}\n"
+        "  z: {arfima: {d: 0.4, phi: 0.5, sd: 1, method: exact}}")
     plain = draw(graph, 3, 5, [20, 30])
     with compiling(True):
         compiled = draw(graph, 3, 5, [7, 43])
@@ -168,14 +175,107 @@ def test_the_exact_recursion_refuses_more_steps_than_it_is_for():
     assert error.value.faults[0].message == expected
 
 
+def covariances(d, phi, theta, count):
+    """Of unit shocks, at lags 0 … count − 1: statsmodels' of the ARMA part, Hosking's by mpmath, convolved."""
+    reach = 400
+    filtered = arma_acovf([1, *(-c for c in phi)], [1, *theta], reach)
+    with mpmath.workdps(30):
+        d = mpmath.mpf(d)
+        memory = [mpmath.gamma(1 - 2 * d) / mpmath.gamma(1 - d) ** 2]
+        for k in range(1, count + reach):
+            memory.append(memory[-1] * (k - 1 + d) / (k - d))
+    memory = np.array(memory, dtype=float)
+    both = np.concatenate([memory[:0:-1], memory])
+    return np.convolve(np.concatenate([filtered[:0:-1], filtered]), both)[len(both) // 2 + reach - 1 :][:count]
+
+
+EXACT = [(0.3, (), ()), (-0.45, (), ()), (0.45, (0.6, -0.3), (0.5,)), (-0.2, (0.9,), ()), (0.0, (0.5,), (0.4, 0.2))]
+
+
+@pytest.mark.parametrize(("d", "phi", "theta"), EXACT)
+def test_by_the_exact_method_values_have_the_exact_covariances(d, phi, theta, monkeypatch):
+    """J J′ of the value code, without theory and without chance; statsmodels and Hosking (1981) as the reference."""
+    steps, body = 40, f"{{arfima: {{d: {d}, phi: {list(phi)}, theta: {list(theta)}, sd: 3, method: exact}}}}"
+    body = body.replace("phi: [], ", "").replace("theta: [], ", "")
+    j = jacobian(graph_of(f"  x: {body}", steps=steps), steps, monkeypatch, 64)["x"]
+    ideal = 9 * covariances(d, phi, theta, steps)
+    np.testing.assert_allclose(j @ j.T, toeplitz(ideal), rtol=0, atol=1e-13 * ideal[0])
+
+
+@pytest.mark.parametrize("d", [0.3, 0.49, -0.45])
+def test_the_partial_autocorrelations_are_those_published(d):
+    """d/(k − d) at lag k (Hosking 1981, theorem 1; Brockwell & Davis 1991, 13.2), out to the last step."""
+    predictors = _predictors(d, (), ())
+    for k in (1, 2, 7, 100, 3000):
+        weights, _ = predictors.at(k)
+        assert weights[-1] == pytest.approx(d / (k - d), rel=1e-9)
+
+
+def test_the_exact_recursion_is_that_of_statsmodels():
+    """Its Levinson-Durbin recursion: predictors and the variance of what is new."""
+    gamma = covariances(0.4, (0.5,), (0.3,), 60)
+    variance, weights, *_ = levinson_durbin(gamma, nlags=59, isacov=True)
+    own, spread = _predictors(0.4, (0.5,), (0.3,)).at(59)
+    np.testing.assert_allclose(own, weights, rtol=0, atol=1e-12)
+    assert spread**2 == pytest.approx(variance / gamma[0], rel=1e-12)
+
+
+@pytest.mark.parametrize(("d", "phi", "theta"), EXACT)
+def test_the_exact_covariances_out_to_the_last_step_are_those_that_theory_states(d, phi, theta):
+    """But for the roundings of a product of so many ratios, 2e-16 each."""
+    lags = np.array([0, 1, 2, 77, 5000, 9999])
+    ideal = Filtered(FractionalNoise(d), phi, theta)(lags)
+    found = _predictors(d, phi, theta).gamma[lags]
+    np.testing.assert_allclose(found, ideal / ideal[0], rtol=1e-12, atol=1e-15)
+    body = f"{{arfima: {{d: {d}, sd: 2, method: exact}}}}"
+    assert np.array_equal(known(body).covariance(lags, 0 * lags), 4 * FractionalNoise(d)(lags))
+
+
+@pytest.mark.parametrize("spread", ["sd: 2", "total_sd: 5"])
+def test_shocks_come_back_and_tiles_change_nothing(spread):
+    graph = graph_of(f"  x: {{arfima: {{d: 0.4, phi: 0.5, {spread}, method: exact}}}}")
+    x = draw(graph, 3, 70, [50])["x"]
+    for first, paths, tiles in ((3, 70, [7, 43]), (3, 70, [1] * 50), (20, 2, [20, 30])):
+        assert np.array_equal(draw(graph, first, paths, tiles)["x"], x[:, first - 3 : first - 3 + paths])
+    back = recovery(graph, "x", 70)
+    z = np.concatenate([back.tile(x[:9]), back.tile(x[9:])])
+    source = graph.source_of("x.arfima")
+    ideal = source.law.shocks(source.stream.uniforms(3, 70, 0, 50))
+    np.testing.assert_allclose(z, ideal, rtol=0, atol=1e-12)
+
+
+def test_the_mixture_cannot_be_undone_but_the_exact_method_can():
+    assert "cannot be undone" in recovery(graph_of("  x: {arfima: {d: 0.4, sd: 1}}"), "x", 1).reason
+
+
+def test_validation_recovers_its_shocks_and_finds_a_mistake():
+    """False alarms: one in 1e6; d 0.30 drawn as 0.27 is found by the autocorrelation of shocks."""
+    bodies = [f"{{arfima: {{d: {d}, phi: 0.4, total_sd: 1, method: exact}}}}" for d in (0.3, 0.27)]
+    right, wrong = (graph_of(f"  x: {body}", steps=300).spec.changed(paths=200) for body in bodies)
+    verdict = pg.validate(pg.render(right), false_alarm=1e-6)
+    assert verdict.agrees
+    assert "shocks: autocorrelation" in set(verdict.checks["what"])
+    x = pg.render(wrong)["x"].ravel()
+    table = pd.DataFrame({"path": np.repeat(range(200), 300), "step": np.tile(range(300), 200), "x": x})
+    assert pg.validate(table, spec=right, false_alarm=1e-6).agrees is False
+
+
+def test_by_the_exact_method_more_steps_than_it_is_for_are_refused():
+    with pytest.raises(SpecError) as error:
+        graph_of("  x: {arfima: {d: 0.3, sd: 1, method: exact}}", steps=10_001)
+    expected = "expected at most 10,000 steps with arfima, got 10,001; ask for fewer, or leave out `method: exact`"
+    assert error.value.faults[0].message == expected
+    assert graph_of("  x: {arfima: {d: 0.3, sd: 1}}", steps=10_001)
+
+
 @pytest.mark.parametrize(("steps", "paths"), [(0, 2), (1, 1), (2, 3), (700, 1), (301, 30)])
 def test_few_paths_take_all_steps_before_in_one_call(steps, paths):
     """The same bits as step by step: the sums are in the same order."""
     rng = np.random.default_rng(1)
     weights, past, z = rng.standard_normal(steps), rng.standard_normal((steps, paths)), rng.standard_normal((1, paths))
     one, other = np.empty((1, paths)), np.empty((1, paths))
-    fractional.predict(weights, past, z, one)
-    fractional.predicted(weights, past, z, other)
+    predict(weights, past, z, one)
+    predicted(weights, past, z, other)
     np.testing.assert_array_equal(one, other)
 
 

@@ -1,0 +1,104 @@
+"""Stationary Gaussian series drawn exactly from their autocovariances: each value is predicted from all before it."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from threading import local
+
+import numpy as np
+
+from procgen.chance.kernel import is_compiling, kernel
+from procgen.terms.base import Ahead, Array, State
+
+LONGEST_EXACT = 10_000  # steps: their work grows with the square of them
+NARROW = 64  # paths, from which on a call for each step before costs less than all of them at once
+
+
+@kernel
+def predict(weights, past, z, out):
+    """out = z + Σ weights[j] past[−1−j]."""
+    n = weights.shape[0]
+    x = z[0]
+    for j in range(n):
+        x = x + weights[j] * past[n - 1 - j]
+    out[0] = x
+
+
+def predicted(weights: Array, past: Array, z: Array, out: Array) -> None:
+    """`predict`, where few paths are not compiled by one call for all steps before: the same sums in the same order."""
+    if past.shape[1] >= NARROW or is_compiling():
+        predict(weights, past, z, out)
+    else:
+        out[:] = np.add.accumulate(np.concatenate([z, weights[:, None] * past[::-1]]), axis=0)[-1]
+
+
+class Predictors(local):
+    """Best linear predictors from all t values before (Durbin 1960; Levinson 1947), by autocorrelations at all lags.
+
+    Each thread has weights of its own, as each is at a step of its own.
+    """
+
+    def __init__(self, gamma: Array):
+        self.gamma = gamma
+        self._restart()
+
+    def _restart(self) -> None:
+        self.weights, self.variance = np.zeros(0), 1.0
+
+    def at(self, t: int) -> tuple[Array, float]:
+        """The weights of the last t values, newest first, and the standard deviation of what is new; sd 1."""
+        if t < len(self.weights):
+            self._restart()
+        while len(self.weights) < t:
+            known = len(self.weights)
+            missed = self.gamma[known + 1] - added(self.weights * self.gamma[known:0:-1])
+            partial = missed / self.variance
+            self.weights = np.append(self.weights - partial * self.weights[::-1], partial)
+            self.variance = self.variance * (1.0 - partial * partial)
+        return self.weights, float(np.sqrt(self.variance))
+
+
+@dataclass(frozen=True)
+class Exact:
+    """A series of standard deviation `sd` by its predictors. Its state is all its values so far, x (steps, paths)."""
+
+    predictors: Predictors
+    sd: float
+
+    def begin(self) -> State:
+        return {"x": np.zeros((0, 1))}
+
+    def draw(self, normals: Array, state: State) -> tuple[Array, State]:
+        """The values of as many standard normals (steps, paths), and the state after them."""
+        z, past = self.sd * normals, state["x"]
+        x = np.empty((len(past) + len(z), max(z.shape[1], past.shape[1] if len(past) else 1)))
+        x[: len(past)] = past
+        for t in range(len(past), len(x)):
+            weights, spread = self.predictors.at(t)
+            predicted(weights, x[:t], spread * z[t - len(past) : t - len(past) + 1], x[t : t + 1])
+        return x[len(past) :].copy(), {"x": x}
+
+    def undo(self, values: Array, state: State | None) -> tuple[Array, State]:
+        """The standard normals behind values (steps, paths), and the state after them."""
+        past = state["x"] if state else np.zeros((0, values.shape[1]))
+        x, out = np.concatenate([past, values]), np.empty_like(values)
+        for t in range(len(past), len(x)):
+            weights, spread = self.predictors.at(t)
+            row = out[t - len(past) : t - len(past) + 1]
+            predicted(-weights, x[:t], x[t : t + 1], row)
+            row /= spread * self.sd
+        return out, {"x": x}
+
+    def ahead(self, steps: int, state: State) -> Ahead:
+        mean, _ = self.draw(np.zeros((steps, max(1, state["x"].shape[1]))), state)
+        psi, _ = self.draw(np.eye(steps), {"x": np.zeros((len(state["x"]), steps))})
+        return Ahead(mean, (psi * psi) @ np.ones((steps, 1)))
+
+
+def added(values: Array) -> float:
+    """The sum of a vector, halves onto halves: an order that is the same everywhere."""
+    while len(values) > 1:
+        half = len(values) // 2
+        rest = values[2 * half :]
+        values = np.append(values[:half] + values[half : 2 * half], rest)
+    return float(values[0]) if len(values) else 0.0
