@@ -154,7 +154,7 @@ class Hinged(Process):
         sd = np.sqrt(np.maximum(at_any(self.body, self.body, steps, steps), 0.0))
         mean = mean_at(self.body, steps)
         with np.errstate(divide="ignore", invalid="ignore"):
-            return sd, np.where(sd > 0.0, -mean / sd, -np.inf * np.sign(mean))
+            return sd, np.where(sd > 0.0, -mean / sd, np.where(mean > 0.0, -np.inf, np.inf))
 
     def mean(self, steps: Steps) -> np.ndarray:
         """E max(x, 0)."""

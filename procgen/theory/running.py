@@ -154,13 +154,11 @@ def _table(of: Of, sums: tuple[bool, bool], rows: Steps, columns: Steps) -> np.n
 def _over_lags(of: Of, sums: tuple[bool, bool], t: Steps, s: Steps) -> np.ndarray:
     """With g(h) the covariance at lag h, G its sums and H theirs: of a sum to t and y(s), G(t - s) - G(-s);
     of x(t) and a sum to s, G(t - 1) - G(t - s - 1); of both, H(t - 1) - H(-1) - H(t - s - 1) + H(-s - 1)."""
-    zero = np.zeros_like(t)
+    ends: list[tuple[Steps, float]] = [(t - 1, 1.0), (t - s - 1, -1.0)]
     if all(sums):
-        ends = (t - 1, 1.0), (zero - 1, -1.0), (t - s - 1, -1.0), (-s - 1, 1.0)
+        ends += [(np.full_like(t, -1), -1.0), (-s - 1, 1.0)]
     elif sums[0]:
-        ends = (t - s, 1.0), (-s, -1.0)
-    else:
-        ends = (t - 1, 1.0), (t - s - 1, -1.0)
+        ends = [(t - s, 1.0), (-s, -1.0)]
     low, high = min(int(e.min()) for e, _ in ends), max(int(e.max()) for e, _ in ends)
     if high - low >= LONGEST:
         raise Unknown(f"a running sum of it is added up over at most {LONGEST:,} lags")
