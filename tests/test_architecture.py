@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import ast
 import importlib
+import pkgutil
+import re
 import subprocess
 import sys
 from pathlib import Path
@@ -11,6 +13,7 @@ from pathlib import Path
 import pytest
 
 import procgen as pg
+from procgen.terms import catalogue
 
 PACKAGE = Path(__file__).parent.parent / "procgen"
 ROOMS = ["spec", "chance", "terms", "theory", "ensemble", "checks", "report"]
@@ -42,6 +45,18 @@ def test_a_room_imports_only_what_stands_before_it(file):
     if room(file) == "ensemble":
         allowed -= {"theory"}
     assert imported(file.read_text(encoding="utf-8")) - allowed == set()
+
+
+@pytest.mark.parametrize("name", ROOMS)
+def test_the_guide_of_a_room_names_every_file_in_it(name):
+    """But for terms, which are found by their kinds: there the guide names what they share."""
+    package = importlib.import_module(f"procgen.{name}")
+    assert package.__doc__ is not None
+    named = set(re.findall(r"`([a-z_0-9]+)`", package.__doc__))
+    files = {module.name for module in pkgutil.iter_modules(package.__path__)}
+    if name == "terms":
+        files -= {term.__module__.rsplit(".", 1)[1] for term in catalogue().values()}
+    assert files - named == set()
 
 
 @pytest.mark.parametrize(

@@ -149,11 +149,11 @@ class Table:
 
     def gathered(self, workers: int | None, progress: Progress | None, scheduler: str | None = None) -> Gather:
         """The sums of one pass, by this process: the table is in its memory."""
+        from procgen.checks.planning import plan_of
         from procgen.checks.source import no_cluster
-        from procgen.checks.validate import plan_of
 
         no_cluster(scheduler)
-        plan = self._plan = plan_of(self.spec, self.steps, self.same_draws)
+        plan = self._plan = plan_of(self.spec, self.steps, self.same_draws, self.paths)
         return in_one_process(plan, self.blocks(), Block(0, self.paths, 0, self.steps), progress)
 
     def blocks(self) -> Iterator[tuple[int, int, Mapping[str, np.ndarray]]]:

@@ -67,14 +67,14 @@ def _level_and_spread(series: str, sums: ShockSums, source: str) -> Iterator[Che
         yield Check.of(series, "shocks: spread score", "all steps", "spread", finding)
 
 
-def no_big_jump(scores: Scores, n: int, order: int, level: float = 1e-6) -> bool:
-    """Whether no single |z|^order can carry the sum of n of them to the tail that a p of `level` lies in."""
+def no_big_jump(scores: Scores, n: int, order: int) -> bool:
+    """Whether no single |z|^order can carry the sum of n of them to the tail that a p of 1e-6 lies in."""
     law, distribution = scores.law, scores.distribution
     m = law.moment(2 * order)
     if m is None or law.moment(3 * order) is None:
         return False
     reach = (REACH * math.sqrt(max(m - (law.moment(order) or 0.0) ** 2, 0.0) * n)) ** (1 / order)
-    return n * float(distribution.sf(reach) + distribution.cdf(-reach)) < 0.1 * level
+    return n * float(distribution.sf(reach) + distribution.cdf(-reach)) < 0.1 * 1e-6
 
 
 def _memory(series: str, sums: ShockSums) -> Iterator[Check]:
@@ -251,7 +251,7 @@ def _between_paths(series: str, sums: ShockSums) -> Iterator[Check]:
         yield Check.of(series, "shocks: neighbouring paths", "path − 1", "dependence", finding)
 
 
-def cross_checks(pair: str, sums: CrossSums, expected: dict[int, float], note: str = "") -> Iterator[Check]:
+def cross_checks(pair: str, sums: CrossSums, expected: dict[int, float]) -> Iterator[Check]:
     """Correlations between the shocks of two series at each lag, against those stated."""
     for lag in sums.lags:
         n, total = sums.sums[lag]
@@ -263,4 +263,4 @@ def cross_checks(pair: str, sums: CrossSums, expected: dict[int, float], note: s
         size = max(2, round(n * (1 + rho * rho) / max(1 + rho * rho + others, 0.1)))
         finding = judge.covariance(total / n, 1.0, 1.0, rho, size)
         probe = "same step" if lag == 0 else f"lag {lag:+d}"
-        yield Check.of(pair, "shocks: correlation between series", probe, "dependence", finding, note)
+        yield Check.of(pair, "shocks: correlation between series", probe, "dependence", finding)

@@ -92,13 +92,13 @@ def _context(shared: Mapping[str, Any]) -> tuple[OnDisk, Plan]:
 
 
 def _made(shared: Mapping[str, Any]) -> tuple[OnDisk, Plan]:
-    from procgen.checks.validate import plan_of
+    from procgen.checks.planning import plan_of
     from procgen.ensemble.source import read_spec
 
     ensemble = open_ensemble(shared["out"])
     if ensemble.digest != shared["manifest"]:
         raise EnsembleError(f"{shared['out']} was drawn again while it was being read; validate it again")
-    plan = plan_of(read_spec(shared["raw"]), ensemble.whole.steps, shared["same_draws"])
+    plan = plan_of(read_spec(shared["raw"]), ensemble.whole.steps, shared["same_draws"], ensemble.whole.paths)
     if plan.rounded:
         with contextlib.suppress(EnsembleError):  # what cannot be read is named when its part is gathered
             first = first_values(named(ensemble.blocks(), shared["columns"]), ensemble.whole)

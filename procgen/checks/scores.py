@@ -166,11 +166,6 @@ class Scores:
         return (counts @ self.components) / np.sqrt(counts.sum())
 
 
-def bin_counts(u: NDArray) -> NDArray:
-    """Counts of u in BINS equal bins."""
-    return np.bincount(np.minimum((u * BINS).astype(np.intp).ravel(), BINS - 1), minlength=BINS)
-
-
 def largest_gap(counts: NDArray) -> float:
     """Kolmogorov's distance at the bin edges."""
     n = counts.sum()

@@ -56,7 +56,7 @@ class Cut:
 
 def checks(origin: Any, gather: Gather, rows: Sequence[Check]) -> Iterator[Check]:
     """The moment checks of those series of few long paths that `rows` could not judge by shocks."""
-    from procgen.checks.validate import plan_of
+    from procgen.checks.planning import plan_of
     from procgen.theory import theory
 
     steps = gather.plan.steps

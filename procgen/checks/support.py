@@ -96,21 +96,22 @@ def checks(series: str, possible: Possible, outside: Found | None, moved: Found 
     if not possible.support.everything:
         allowed, fault = words(possible.support), ""
         if outside is not None:
-            count, path, step, value = outside
-            fault = (
-                f"{count:,} value{'s' if count > 1 else ''} that the process cannot give, the first at path {path}, "
-                f"step {step}: {number(value, 10)}, where values are {allowed}"
-            )
+            fault = _first(outside, ("value", "values"), "that the process cannot give", allowed)
         yield Check.fact(series, POSSIBLE, "all steps", fault, f"all values are {allowed}")
     if possible.every > 1:
         allowed, fault = f"held for {possible.every} steps from step {possible.first % possible.every} on", ""
         if moved is not None:
-            count, path, step, value = moved
-            fault = (
-                f"{count:,} value{'s differ' if count > 1 else ' differs'} from the one before, the first at path "
-                f"{path}, step {step}: {number(value, 10)}, where values are {allowed}"
-            )
+            fault = _first(moved, ("value differs", "values differ"), "from the one before", allowed)
         yield Check.fact(series, HELD, "all steps", fault, f"all values are {allowed}")
+
+
+def _first(found: Found, one_or_many: tuple[str, str], what: str, allowed: str) -> str:
+    """How many values are wrong, and the first of them."""
+    count, path, step, value = found
+    return (
+        f"{count:,} {one_or_many[count > 1]} {what}, the first at path {path}, step {step}: {number(value, 10)}, "
+        f"where values are {allowed}"
+    )
 
 
 def words(support: Support) -> str:

@@ -2,6 +2,16 @@
 
 `render`, `open_ensemble`, `check_digest`, `Ensemble` and `EnsembleError` are the names for other rooms; they
 are imported when they are first used.
+
+- Drawing: `job` asks what is there already (`present`), cuts (`plan`), and hands chains of parts to an engine; a `part`
+  is drawn (`source`, `draw`), stored (`columns`), digested (`digest`) and written in one pass.
+- Engines: `engines` (this process and `worker` processes, `forked` where that is safe; `own` says whose process it is)
+  and `cluster` (Dask).
+- Files: `places` and `store` (OUT, whole or not at all), `layouts`, `forms` (rows of a file), `files` and `parquet`;
+  read again with `reading`, `watched` (behind a URL) and `again` (columns that repeat).
+- What is said of it: `manifest` and its `seal`, `revealed` (drawn parameters), `errors`.
+- Reading: `ensemble`, its `shapes`; for other tools `export`, `choice`, `targets`, `clock`.
+- Comparing: `check` (are these the values that were drawn), `expected`, `beside` (two of them).
 """
 
 from __future__ import annotations

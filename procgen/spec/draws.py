@@ -87,14 +87,45 @@ def _bound(strict: float | None, loose: float | None) -> float | None:
 _BETWEEN = Parameter("within", "", Interval(), "draws are held between these two (truncated)", default=None)
 
 
-def _reached(low: float, high: float) -> None:
-    """ValueError where a normal law hardly ever lies between two ends, in standard deviations."""
-    nearest = max(low, -high)
-    if nearest > MOST_AWAY:
-        raise ValueError(
-            f"expected `within` to reach where draws are, got an end {nearest:g} standard deviations from the mean "
-            "at the nearest; move it"
-        )
+class _Cut(DrawLaw):
+    """A law of normals whose draws may be held between two ends, `within`."""
+
+    everywhere: ClassVar[tuple[float, float]]  # the ends where nothing is cut off
+    within: tuple[float, float] | None
+
+    def away(self, end: float) -> float:
+        """How far an end is from the middle of the normal law, in its standard deviations."""
+        raise NotImplementedError
+
+    def far(self) -> tuple[float, float]:
+        """What is far enough out where nothing is cut off."""
+        raise NotImplementedError
+
+    @property
+    def ends(self) -> tuple[float, float]:
+        return self.everywhere if self.within is None else self.within
+
+    @property
+    def closed(self) -> bool:
+        return self.within is not None
+
+    def trials(self) -> tuple[float, ...]:
+        return self.far() if self.within is None else self.within
+
+    def __post_init__(self) -> None:
+        """ValueError where the law hardly ever lies between its ends."""
+        if self.within is None:
+            return
+        low, high = map(self.away, self.within)
+        nearest = max(low, -high)
+        if nearest > MOST_AWAY:
+            raise ValueError(
+                f"expected `within` to reach where draws are, got an end {nearest:g} standard deviations from the mean "
+                "at the nearest; move it"
+            )
+
+    def _said(self) -> str:
+        return f" within [{self.low:g}, {self.high:g}]" if self.within else ""
 
 
 @dataclass(frozen=True)
@@ -114,8 +145,9 @@ class UniformDraw(DrawLaw):
 
 
 @dataclass(frozen=True)
-class NormalDraw(DrawLaw):
+class NormalDraw(_Cut):
     name = "normal"
+    everywhere = (-math.inf, math.inf)
     purpose = "the normal law, cut off outside `within` where that is given"
     parameters = (
         Parameter("mean", "m", Real(), "mean (before any cut)"),
@@ -130,29 +162,20 @@ class NormalDraw(DrawLaw):
     def location(self) -> float:
         return self.mean
 
-    @property
-    def ends(self) -> tuple[float, float]:
-        return (-math.inf, math.inf) if self.within is None else self.within
+    def away(self, end: float) -> float:
+        return (end - self.mean) / self.sd
 
-    @property
-    def closed(self) -> bool:
-        return self.within is not None
-
-    def __post_init__(self) -> None:
-        if self.within is not None:
-            _reached(*((end - self.mean) / self.sd for end in self.within))
-
-    def trials(self) -> tuple[float, ...]:
-        return (self.mean - FAR * self.sd, self.mean + FAR * self.sd) if self.within is None else self.within
+    def far(self) -> tuple[float, float]:
+        return self.mean - FAR * self.sd, self.mean + FAR * self.sd
 
     def __str__(self) -> str:
-        cut = f" within [{self.low:g}, {self.high:g}]" if self.within else ""
-        return f"normal with mean {self.mean:g} and sd {self.sd:g}{cut}"
+        return f"normal with mean {self.mean:g} and sd {self.sd:g}{self._said()}"
 
 
 @dataclass(frozen=True)
-class LognormalDraw(DrawLaw):
+class LognormalDraw(_Cut):
     name = "lognormal"
+    everywhere = (0.0, math.inf)
     purpose = "a value above 0 whose logarithm is normal, cut off outside `within` where that is given"
     parameters = (
         Parameter("median", "m", Real(above=0), "median (before any cut)"),
@@ -163,27 +186,20 @@ class LognormalDraw(DrawLaw):
     sigma: float
     within: tuple[float, float] | None = None
 
-    @property
-    def ends(self) -> tuple[float, float]:
-        return (0.0, math.inf) if self.within is None else self.within
-
-    @property
-    def closed(self) -> bool:
-        return self.within is not None
-
-    def trials(self) -> tuple[float, ...]:
-        far = math.exp(FAR * self.sigma)
-        return (self.median / far, self.median * far) if self.within is None else self.within
-
     def __post_init__(self) -> None:
         if self.within is not None and self.within[0] <= 0:
             raise ValueError(f"expected `within` above 0 for a lognormal, got {self.within[0]:g}")
-        if self.within is not None:
-            _reached(*(math.log(end / self.median) / self.sigma for end in self.within))
+        super().__post_init__()
+
+    def away(self, end: float) -> float:
+        return math.log(end / self.median) / self.sigma
+
+    def far(self) -> tuple[float, float]:
+        factor = math.exp(FAR * self.sigma)
+        return self.median / factor, self.median * factor
 
     def __str__(self) -> str:
-        cut = f" within [{self.low:g}, {self.high:g}]" if self.within else ""
-        return f"lognormal with median {self.median:g} and sigma {self.sigma:g}{cut}"
+        return f"lognormal with median {self.median:g} and sigma {self.sigma:g}{self._said()}"
 
 
 @dataclass(frozen=True)

@@ -9,8 +9,8 @@ import numpy as np
 
 from procgen.chance.kernel import kernel
 from procgen.spec.declare import Parameter, Real, Reals, Record, Span, Whole
-from procgen.terms.arma import Arma, not_causal
-from procgen.terms.base import LAW, SD, Ahead, Term, Unknown, number, rows, signed, stated, without_gap
+from procgen.terms.arma import PAST_SHOCKS, Arma, not_causal
+from procgen.terms.base import LAW, PAST_VALUES, SD, Ahead, Term, Unknown, number, rows, signed, stated, without_gap
 from procgen.terms.rows import alike
 from procgen.terms.start import partial_autocorrelations
 
@@ -195,10 +195,7 @@ class Arima(Integrated):
         Parameter(
             "before",
             "",
-            Record(
-                Parameter("x", "x", Reals(), "values before step 0, oldest first", unit="series"),
-                Parameter("shocks", "a", Reals(), "shocks before step 0, oldest first", default=(), unit="series"),
-            ),
+            Record(PAST_VALUES, PAST_SHOCKS),
             "what came before step 0; then step 0 is the first random step, and `start` is not used",
             default=None,
         ),

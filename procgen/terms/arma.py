@@ -25,6 +25,8 @@ from procgen.terms.start import (
 FORGOTTEN = 1e-9
 LONGEST = 5_000  # coefficients
 
+PAST_SHOCKS = Parameter("shocks", "a", Reals(), "shocks before step 0, oldest first", default=(), unit="series")
+
 
 @kernel
 def recursion(phi, theta, x, a):
@@ -94,7 +96,7 @@ class Arma(Term):
             "",
             Record(
                 Parameter("x", "x", Reals(), "values before step 0, oldest first", default=(), unit="series"),
-                Parameter("shocks", "a", Reals(), "shocks before step 0, oldest first", default=(), unit="series"),
+                PAST_SHOCKS,
             ),
             "what came before step 0, to leave from a known past instead of the stationary law",
             default=None,

@@ -19,7 +19,7 @@ from typing import Any, ClassVar
 import numpy as np
 
 from procgen.chance.laws import Normal
-from procgen.spec.declare import LawOf, Parameter, Real
+from procgen.spec.declare import LawOf, Parameter, Real, Reals
 from procgen.terms.support import EVERYTHING, Support
 
 LEAST_LOG = -708.0  # of what an exponential gives with all its digits
@@ -269,6 +269,7 @@ TOTAL_SD = Parameter(
     default=None,
     unit="series",
 )
+PAST_VALUES = Parameter("x", "x", Reals(), "values before step 0, oldest first", unit="series")
 LAW = Parameter("law", "", LawOf(), "law of the shock, standardised to mean 0 and variance 1", default=Normal())
 
 

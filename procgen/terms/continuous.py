@@ -8,11 +8,11 @@ import numpy as np
 
 from procgen.chance.kernel import kernel
 from procgen.chance.portable import exp, lost
-from procgen.spec.declare import Parameter, Real, Reals, Record
+from procgen.spec.declare import Parameter, Real, Record
 from procgen.spec.elapsed import Clock
 from procgen.terms.arima import Integrated
 from procgen.terms.arma import Arma
-from procgen.terms.base import LAW, TOTAL_SD, number, signed, stated, without_gap
+from procgen.terms.base import LAW, PAST_VALUES, TOTAL_SD, number, signed, stated, without_gap
 from procgen.terms.noise import WhiteNoise
 from procgen.terms.rows import plain
 
@@ -109,7 +109,7 @@ class OrnsteinUhlenbeck(Integrated):
         Parameter(
             "before",
             "",
-            Record(Parameter("x", "x", Reals(), "values before step 0, oldest first", unit="series")),
+            Record(PAST_VALUES),
             "what came before step 0, to leave from a known value instead of the stationary law",
             default=None,
         ),

@@ -179,17 +179,17 @@ def _decay_of_one(a: float, negligible: float) -> int:
     return n + 1
 
 
-def decay_lengths(a: Array, negligible: float = NEGLIGIBLE) -> Array:
+def decay_lengths(a: Array) -> Array:
     """`decay_length` of many single numbers at once, by the same products: each path may have its own."""
     powers = [a]
-    while (np.abs(powers[-1]) > negligible).any():
+    while (np.abs(powers[-1]) > NEGLIGIBLE).any():
         if 1 << len(powers) > LONGEST:
             raise ValueError(f"the recursion still feels its start after {LONGEST:,} steps")
         powers.append(powers[-1] * powers[-1])
     n, reached = np.zeros(a.shape, np.int64), np.ones(a.shape)
     for k in range(len(powers) - 2, -1, -1):
         further = reached * powers[k]
-        more = np.abs(further) > negligible
+        more = np.abs(further) > NEGLIGIBLE
         n, reached = np.where(more, n + (1 << k), n), np.where(more, further, reached)
     return n + 1
 

@@ -16,7 +16,7 @@ from procgen.chance.laws import Normal
 from procgen.spec.declare import REQUIRED, Choice, Parameter, Real, Reals, Record, Span
 from procgen.terms.arima import LONGEST, SHOCK_SD, Integrated, filled
 from procgen.terms.arma import Arma
-from procgen.terms.base import LAW, Ahead, Draw, Term, number
+from procgen.terms.base import LAW, PAST_VALUES, Ahead, Draw, Term, number
 from procgen.terms.walk import accumulate
 
 NORMAL = Normal()
@@ -245,7 +245,7 @@ class SeasonalRandomWalk(Integrated):
         Parameter(
             "before",
             "",
-            Record(Parameter("x", "x", Reals(), "values before step 0, oldest first", unit="series")),
+            Record(PAST_VALUES),
             "what came before step 0; then step 0 is the first random step, and `start` is not used",
             default=None,
         ),

@@ -5,8 +5,8 @@ from __future__ import annotations
 import numpy as np
 
 from procgen.chance.kernel import kernel
-from procgen.spec.declare import Parameter, Real, Reals, Record
-from procgen.terms.base import LAW, SD, Ahead, Term, number, rows, signed, stated
+from procgen.spec.declare import Parameter, Real, Record
+from procgen.terms.base import LAW, PAST_VALUES, SD, Ahead, Term, number, rows, signed, stated
 
 
 @kernel
@@ -37,7 +37,7 @@ class RandomWalk(Term):
         Parameter(
             "before",
             "",
-            Record(Parameter("x", "x", Reals(), "values before step 0, oldest first", unit="series")),
+            Record(PAST_VALUES),
             "what came before step 0; then step 0 is one step away from the last of it, and `start` is not used",
             default=None,
         ),

@@ -1,4 +1,22 @@
-"""The algebra of moments: exact means, covariances, laws and verdicts of composed series."""
+"""The algebra of moments: exact means, covariances, laws and verdicts of composed series. Nothing is simulated.
+
+The way through it: a term writes its moments on an `axis`, which makes an `expression`: known functions (`known`) times
+`monomials` of `linear` forms of `sources`. `series` asks it, and `whole` joins the series of a spec. What has no answer
+raises `unknown`, with its reason.
+
+- Moments of expressions: `covariance`, `wick` (products), `exponentials`, `cumulants` (orders 3 and 4), `fourth`,
+  `ties` and `copula` (two shocks of one step).
+- Linear series: `arma`, `weights`, `recursion`, `longhand` (sums that cancel), `system` (state spaces, any step),
+  `wold`, `vector`, `fractional`, `elapsed` (unequal steps), `left` (a recorded past).
+- Volatility: `volatile` (constructors), `volatility`, `garch`, `powers`, `firstorder`, `perpetuity`, `transient`,
+  `logvariance`, `parallel`.
+- Processes that are no filter: `processes`, `stated`, `chains`, `markov`, `bends`, `lattice`, `distributed`,
+  `bootstrap`.
+- Laws at one step: `laws`, `counted`, `lumps` (values with a chance of their own), `mixtures`, `joint`, `stable`,
+  `characteristic`, `averages`.
+- What is asked of a series: `memory`, `spectrum`, `horizon` with `filtering`, `verdict` (is it stationary).
+- Drawn parameters, averaged over their law: `varied`, `quadrature`, `mixed`, `mixedseries`, `mixedlaw`, `mixedlumps`.
+"""
 
 import sys
 from types import ModuleType

@@ -7,11 +7,12 @@ import pytest
 
 from procgen.checks import copies
 from procgen.checks.copies import COPIED, STUCK, Repeats, Watch, checks
+from procgen.checks.judgement import judged
 from procgen.checks.lane import Pass
+from procgen.checks.planning import plan_of
 from procgen.checks.structure import ZEROS
-from procgen.checks.validate import gathered, judged, plan_of
 from procgen.checks.verdict import Verdict
-from tests.studies.departures import draw, spec_of
+from tests.studies.departures import draw, gathered, spec_of
 from tests.studies.families import FAMILIES
 
 AR = [{"constant": 5}, {"ar": {"phi": 0.6, "sd": 1}}]

@@ -9,8 +9,8 @@ from scipy import stats
 import procgen as pg
 from procgen.checks import extremes, tails
 from procgen.checks.extremes import KEPT, Reach, checks, merged
+from procgen.checks.planning import plan_of
 from procgen.checks.structure import Structure
-from procgen.checks.validate import plan_of
 from procgen.checks.words import name_of
 from tests.studies.departures import draw, spec_of, verdict
 

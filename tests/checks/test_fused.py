@@ -10,12 +10,12 @@ from procgen.checks import lane as room
 from procgen.checks.blocks import WIDE, add_lags, add_products
 from procgen.checks.copies import Repeats, Watch
 from procgen.checks.lane import Pass
+from procgen.checks.planning import plan_of
 from procgen.checks.recover import dither
 from procgen.checks.scores import Scores
 from procgen.checks.shocks import MEMORY_LAGS, SHOCK_ARRAYS, ShockSums
 from procgen.checks.structure import _looked
 from procgen.checks.sums import Moments, Powers
-from procgen.checks.validate import plan_of
 from tests.studies.departures import draw, spec_of
 
 needs_numba = pytest.mark.skipif(not kernel.available(), reason="numba is not installed")

@@ -5,10 +5,11 @@ import pytest
 
 from procgen.checks import farthest
 from procgen.checks.gather import Gather
+from procgen.checks.judgement import judged
 from procgen.checks.lane import Pass
-from procgen.checks.validate import gathered, judged, plan_of
+from procgen.checks.planning import plan_of
 from procgen.checks.verdict import Verdict
-from tests.studies.departures import draw, spec_of
+from tests.studies.departures import draw, gathered, spec_of
 
 BODY = {
     "series": {

@@ -89,6 +89,6 @@ def test_true_ensembles_agree(name, shape):
 
 
 def _rows(stated, values):
-    from procgen.checks.validate import judged
+    from procgen.checks.judgement import judged
 
     return judged(sums(stated, values))

@@ -4,9 +4,10 @@ import numpy as np
 import pytest
 from scipy import stats
 
-from procgen.checks.validate import gathered, judged, plan_of
+from procgen.checks.judgement import judged
+from procgen.checks.planning import plan_of
 from procgen.checks.verdict import Verdict
-from tests.studies.departures import draw, spec_of, verdict
+from tests.studies.departures import draw, gathered, spec_of, verdict
 
 
 def body(**changes):

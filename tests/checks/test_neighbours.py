@@ -4,10 +4,11 @@ import numpy as np
 import pytest
 from scipy import stats
 
+from procgen.checks.judgement import judged
 from procgen.checks.neighbours import plan_neighbours
-from procgen.checks.validate import gathered, judged, plan_of
+from procgen.checks.planning import plan_of
 from procgen.checks.verdict import Verdict
-from tests.studies.departures import draw, spec_of, verdict
+from tests.studies.departures import draw, gathered, spec_of, verdict
 
 PATHS, STEPS = 20_000, 20
 

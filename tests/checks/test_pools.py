@@ -11,8 +11,8 @@ import pytest
 from scipy.stats import norm
 
 import procgen as pg
+from procgen.checks.planning import plan_of
 from procgen.checks.pools import QUANTILES, PoolLane
-from procgen.checks.validate import plan_of
 from tests.studies.departures import Departure, draw, planted, spec_of, verdict
 
 

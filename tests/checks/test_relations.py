@@ -8,7 +8,7 @@ from scipy.linalg import solve_discrete_lyapunov
 
 import procgen as pg
 from procgen.chance.laws import LAWS
-from procgen.checks.validate import plan_of
+from procgen.checks.planning import plan_of
 from procgen.spec.reader import read_text
 from procgen.terms import catalogue
 

@@ -8,7 +8,7 @@ import pytest
 from scipy import stats
 
 from procgen.checks import judge, saddle
-from procgen.checks.validate import plan_of
+from procgen.checks.planning import plan_of
 from tests.studies.departures import draw, spec_of, verdict
 
 

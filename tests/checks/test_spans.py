@@ -10,7 +10,7 @@ from scipy import stats
 
 import procgen as pg
 from procgen.checks import spans
-from procgen.checks.validate import plan_of
+from procgen.checks.planning import plan_of
 from procgen.terms.given import spec_of
 
 HEAD = "procgen: 1\nseed: 1\npaths: {paths}\ntime: {{steps: {steps}}}\nseries:\n  x: [{term}]\n"

@@ -9,10 +9,11 @@ from scipy import stats
 from procgen.checks import judge
 from procgen.checks.judge import Finding, Sample
 from procgen.checks.judge_pools import _hidden
+from procgen.checks.judgement import judged
+from procgen.checks.planning import plan_of
 from procgen.checks.recover import Route, dither
-from procgen.checks.validate import gathered, judged, plan_of
 from procgen.checks.verdict import Check, Verdict
-from tests.studies.departures import draw, spec_of
+from tests.studies.departures import draw, gathered, spec_of
 
 FLAG = [{"flag": {"share": 0.02}}]
 COMPOUND = [{"compound_poisson": {"rate": 0.02, "mean": 5, "sd": 2}}]

@@ -3,8 +3,8 @@
 import numpy as np
 import pytest
 
+from procgen.checks.planning import plan_of
 from procgen.checks.squares import LAGS, SquareLane, SquareSums
-from procgen.checks.validate import plan_of
 from tests.studies.departures import draw, spec_of, verdict
 
 

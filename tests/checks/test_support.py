@@ -7,12 +7,13 @@ import numpy as np
 import pytest
 
 import procgen as pg
+from procgen.checks.judgement import judged
+from procgen.checks.planning import plan_of
 from procgen.checks.structure import Precision, Structure
 from procgen.checks.support import HELD, POSSIBLE, Possible, possible_of, words
-from procgen.checks.validate import gathered, judged, plan_of
 from procgen.terms.graph import build
 from procgen.terms.support import BINARY, COUNTS, EVERYTHING, POSITIVE, Support, added, finite
-from tests.studies.departures import draw, spec_of, verdict
+from tests.studies.departures import draw, gathered, spec_of, verdict
 
 SPECS = sorted((Path(__file__).parents[2] / "specs").glob("*.yaml"))
 WIDE = [{"ar": {"phi": 0.6, "total_sd": 2}}]

@@ -8,7 +8,7 @@ import pytest
 from procgen.chance import kernel
 from procgen.checks.gather import Gather
 from procgen.checks.lane import Pass
-from procgen.checks.validate import plan_of
+from procgen.checks.planning import plan_of
 from tests.studies.departures import draw, spec_of, verdict
 
 NOISE = {"series": {"x": [{"white_noise": {"sd": 1}}], "y": [{"white_noise": {"sd": 2}}]}}

@@ -8,10 +8,11 @@ import pytest
 from statsmodels.stats.multitest import multipletests
 
 from procgen.checks.judge import Sample, anderson_darling, normal_mean, sample_mean, unit
-from procgen.checks.validate import gathered, judged, plan_of
+from procgen.checks.judgement import judged
+from procgen.checks.planning import plan_of
 from procgen.checks.verdict import COLUMNS, Check, Verdict, holm
 from procgen.checks.words import alike, p_text, side_by_side
-from tests.studies.departures import draw, spec_of
+from tests.studies.departures import draw, gathered, spec_of
 
 
 def test_holm_of_four():

@@ -13,7 +13,7 @@ from __future__ import annotations
 import argparse
 import copy
 import sys
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterable, Iterator
 from dataclasses import dataclass
 from functools import lru_cache
 from pathlib import Path
@@ -54,7 +54,7 @@ def spec_of(body: Any, paths: int, steps: int, seed: int) -> Any:
 
 @lru_cache(maxsize=64)
 def _plan(key: str, paths: int, steps: int) -> Any:
-    from procgen.checks.validate import plan_of
+    from procgen.checks.planning import plan_of
 
     return plan_of(spec_of(eval(key), paths, steps, 1))  # a key is the repr of plain data
 
@@ -69,15 +69,24 @@ def draw(spec: Any) -> Values:
 
 def sums(stated: Any, values: Values) -> Any:
     """The sums of one pass over arrays."""
-    from procgen.checks.validate import gathered
-
     paths, steps = next(iter(values.values())).shape
     return gathered(_plan(repr(stated), paths, steps), [(0, 0, values)])
 
 
+def gathered(plan: Any, blocks: Iterable[tuple[int, int, Values]]) -> Any:
+    """The sums of one pass, in this process, over blocks that are the whole ensemble; they may be cut anywhere."""
+    from procgen.checks.lane import in_one_process
+    from procgen.ensemble.plan import Block
+
+    listed = list(blocks)
+    first = min(path for path, _, _ in listed)
+    end = max(path + len(values[plan.names[0]]) for path, _, values in listed)
+    return in_one_process(plan, listed, Block(first, end - first, 0, plan.steps))
+
+
 def verdict(stated: Any, values: Values, false_alarm: float = 0.001) -> Any:
     """The verdict on arrays, without the digest (which would see any change of a stored value)."""
-    from procgen.checks.validate import judged
+    from procgen.checks.judgement import judged
     from procgen.checks.verdict import Verdict
 
     return Verdict(list(judged(sums(stated, values))), false_alarm)

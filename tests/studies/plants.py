@@ -277,7 +277,7 @@ def error_moments(stated: Any, drawn_body: Any, steps: int) -> tuple[float, floa
 
     Errors are a linear map of the values: its matrix comes from unit paths, its moments from the values' covariance.
     """
-    from procgen.checks.validate import plan_of
+    from procgen.checks.planning import plan_of
     from procgen.terms.graph import build
     from procgen.theory import theory
 

@@ -274,8 +274,8 @@ def _paired(x: np.ndarray, size: float) -> np.ndarray:
 def _checks(plant: Plant, gather: Any) -> Iterator[Any]:
     """The checks among which the plant's is, and hardly more: the others cost time and are not looked at."""
     from procgen.checks.judge_shocks import cross_checks, shock_checks
+    from procgen.checks.judgement import judged
     from procgen.checks.untied import untied_checks
-    from procgen.checks.validate import judged
 
     pair = tuple(plant.series.split(" ~ "))
     if plant.what == "shocks: correlation between series":

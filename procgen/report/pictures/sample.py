@@ -98,11 +98,11 @@ def of_table(table: Any, limit: int = LIMIT, first: Sequence[str] = ()) -> Sampl
     return Sample(table.spec, values, table.paths, table.steps, note=note)
 
 
-def of_spec(spec: Any, limit: int = DRAWN_LIMIT) -> Sample:
+def of_spec(spec: Any) -> Sample:
     """A few paths of a spec, drawn in memory, and the parts of the first one."""
     from procgen.ensemble import render
 
-    paths, steps = _share(min(spec.paths, DRAWN_PATHS), spec.time.steps, limit // len(spec.series))
+    paths, steps = _share(min(spec.paths, DRAWN_PATHS), spec.time.steps, DRAWN_LIMIT // len(spec.series))
     ensemble = render(spec, paths=paths, steps=steps)
     shown = render(spec, paths=1, steps=min(steps, STRIP), reveal="all")
     values = {name: ensemble[name] for name in _shown(spec, ())}

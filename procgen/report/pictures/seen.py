@@ -147,24 +147,24 @@ def rank_chances(ranks: NDArray, n: int) -> tuple[NDArray, NDArray, NDArray]:
     return law.ppf(0.5), law.ppf(0.025), law.ppf(0.975)
 
 
-def fewest_inside(ranks: NDArray, n: int, draws: int = 4000) -> int:
+def fewest_inside(ranks: NDArray, n: int) -> int:
     """How many of these order statistics lie within their own 95 %, at least, in 99 of 100 samples of n.
 
     Neighbours lie off together, so that no simple law says it: it is counted in samples drawn for it, with a fixed
     seed. Between ranks, uniforms are apart as sums of exponentials are (Rényi 1953).
     """
     rng = np.random.default_rng(n)
-    steps = rng.standard_gamma(np.diff(ranks, prepend=0, append=n + 1), (draws, len(ranks) + 1))
+    steps = rng.standard_gamma(np.diff(ranks, prepend=0, append=n + 1), (4000, len(ranks) + 1))
     u = np.cumsum(steps, axis=1)
     u = u[:, :-1] / u[:, -1:]
     _, low, high = rank_chances(ranks, n)
     return int(np.quantile(((u >= low) & (u <= high)).sum(axis=1), 0.01, method="lower"))
 
 
-def histogram(values: NDArray, grain: float = 0.0, most: int = 60) -> tuple[NDArray, NDArray]:
+def histogram(values: NDArray, grain: float = 0.0) -> tuple[NDArray, NDArray]:
     """Edges and densities over the middle 99.8 % of the values; cells hold whole steps of a rounding `grain`.
 
-    The width is that of Freedman & Diaconis (1981), within 12 to `most` cells.
+    The width is that of Freedman & Diaconis (1981), within 12 to 60 cells.
     """
     x = values[np.isfinite(values)]
     if not len(x):
@@ -173,7 +173,7 @@ def histogram(values: NDArray, grain: float = 0.0, most: int = 60) -> tuple[NDAr
     quarter, three = np.quantile(x, [0.25, 0.75])
     width = 2.0 * (three - quarter) / len(x) ** (1 / 3)
     span = float(high - low) or grain or abs(float(low)) * 0.1 or 1.0
-    width = min(max(width, span / most), span / 12)
+    width = min(max(width, span / 60), span / 12)
     if grain > 0 and width < 40 * grain:
         width = max(1.0, np.ceil(width / grain)) * grain
         low = (np.floor(low / grain) - 0.5) * grain

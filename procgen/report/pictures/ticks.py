@@ -54,7 +54,7 @@ def tick_text(value: float, step: float) -> str:
     return text.replace("-", "−")
 
 
-def step_axis(grid: Any, first: int, last: int, most: int = 6, room: float = 0.0) -> Axis:
+def step_axis(grid: Any, first: int, last: int, room: float = 0.0) -> Axis:
     """The axis of steps first … last: local dates where the spec has a start, else numbers of steps.
 
     `room` is a share of it that is added on both sides.
@@ -62,9 +62,9 @@ def step_axis(grid: Any, first: int, last: int, most: int = 6, room: float = 0.0
     last = max(last, first + 1)
     low, high = first - room * (last - first), last + room * (last - first)
     if grid.start is None:
-        whole = tuple((v, t) for v, t in round_ticks(first, last, most) if v == round(v))
+        whole = tuple((v, t) for v, t in round_ticks(first, last) if v == round(v))
         return Axis(low, high, whole, "step")
-    ticks, span = calendar_ticks(grid, first, last, most)
+    ticks, span = calendar_ticks(grid, first, last)
     return Axis(low, high, ticks, f"{span} ({grid.zone or 'UTC'})")
 
 
