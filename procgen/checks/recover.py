@@ -18,11 +18,15 @@ from procgen.checks.blocks import in_few
 from procgen.checks.few import Few, few_of
 from procgen.checks.kalman import Kalman
 from procgen.checks.scores import Scores
+from procgen.checks.short import soon_forgotten
 from procgen.checks.tied import shock_of
+from procgen.theory.doubles import Rounding
 
 LARGEST_STATE = 300  # elements of the state up to which a Kalman filter is run
 SMALL_STATE = 64  # up to here it is preferred to undoing: it also knows how the series starts
 COARSE = 0.5  # rounding beyond this share of the shock's standard deviation hides the shock
+SPREAD = 2e-3  # the same of double precision's own rounding, which shocks show but in part
+UNSPREAD = 1e-6  # the same where they cannot be spread over its cells
 SPAN = 50  # lags over which correlations between two series' shocks are followed
 _CACHED = 1 << 18  # means of steps that are kept
 FEW = ("among the law's values", "are none of the values of the stated law", "every shock is one of them")
@@ -61,8 +65,10 @@ class Route:
     ranked: float | None = None  # the grain, which ranks take in exactly, where ranks given the past stand for shocks
     hidden: bool = False  # whether these ranks follow states that are not seen
     few: Few | None = None  # how shocks of a law of few values are told apart; what comes out are then ranks
+    forgotten: float | None = None  # share of an unknown first variance that may be left in the shocks
     salt: str = ""  # told apart by it: what spreads the values of one seed is not what spreads those of another
     stopped: str = ""  # why a tile could not be undone
+    own: float = 0.0  # the grain over the sd of shocks, where it is double precision's own: no value lies within a cell
     _means: OrderedDict[tuple[int, int], NDArray] = field(default_factory=OrderedDict, repr=False)
 
     def start(self, first_path: int, paths: int) -> Any:
@@ -74,7 +80,7 @@ class Route:
 
         if self.ranked is not None:
             return ranked(self.graph, self.series, self.theory, self.ranked)
-        return undone(self.graph, self.series, self.theory, first_path, paths)
+        return undone(self.graph, self.series, self.theory, first_path, paths, self.forgotten)
 
     def tile(self, x: NDArray, carrier: Any, first_path: int, first_step: int) -> tuple[NDArray, Any]:
         """Standardised shocks (steps, paths) of the next tile of values, and the carrier after it."""
@@ -83,13 +89,19 @@ class Route:
             with np.errstate(all="ignore"):
                 z = carrier.tile(x, v)
             return self._taken(z, x, carrier)
-        if self.grain:
+        if self.own and self.kalman is not None:  # what is spread is the distance from the mean
+            x = x - self._mean(first_step, len(x))[:, None]
+            x += self.grain * self._dither(x, first_path, first_step)
+            return self.kalman.innovations(x, carrier, first_step)
+        if self.grain and not self.own:
             x = x + self.grain * self._dither(x, first_path, first_step)
         if self.kalman is not None:
             return self.kalman.innovations(x, carrier, first_step, self._mean(first_step, len(x)))
         if carrier is not None:
             with np.errstate(all="ignore"):
                 z = carrier.tile(x)
+            if self.own and isinstance(z, np.ndarray):
+                z = z + self.own * self._dither(x, first_path, first_step)
             if self.few is not None and isinstance(z, np.ndarray):
                 z = self.few.ranks(z, self._dither(x, first_path, first_step, " ") + 0.5)
             return self._taken(z, x, carrier)
@@ -154,10 +166,13 @@ def dither(first_path: int, paths: int, first_step: int, steps: int, series: str
     return (x >> np.uint64(11)).astype(float) * 2.0**-53 - (0.5 - 2.0**-54)
 
 
-def route(name: str, theory: Any, graph: Any, grain: float, same_draws: bool = True) -> Route | Cannot:
+def route(
+    name: str, theory: Any, graph: Any, grain: float, same_draws: bool = True, size: tuple[int, int] = (0, 0)
+) -> Route | Cannot:
     """The best way to the shocks of a series, or why there is none.
 
-    `same_draws`: whether path p of the data has the drawn parameters of path p of the spec.
+    `same_draws`: whether path p of the data has the drawn parameters of path p of the spec. `size`: numbers of paths
+    and steps, where few steps are to be made the most of.
     """
     from procgen.chance.laws import LAWS
     from procgen.checks.special import ranked
@@ -170,11 +185,11 @@ def route(name: str, theory: Any, graph: Any, grain: float, same_draws: bool = T
         return Cannot("the parameters of its paths are drawn, and not known of data that this spec has not drawn")
 
     system = theory.system() if theory.gaussian else None
-    size = len(system.initial) if system is not None and system.noise_path is None else LARGEST_STATE + 1
-    if size == 0 or (system is not None and not np.any(system.noise)):
+    states = len(system.initial) if system is not None and system.noise_path is None else LARGEST_STATE + 1
+    if states == 0 or (system is not None and not np.any(system.noise)):
         return Cannot("nothing is left to chance")
     undone = recovery(graph, name, 1)
-    if size <= (LARGEST_STATE if not undone else SMALL_STATE):
+    if states <= (LARGEST_STATE if not undone else SMALL_STATE):
         return _by_filter(name, theory, graph, grain, system)
     if isinstance(undone, Unknown):
         ranks = ranked(graph, name, theory, grain)
@@ -189,7 +204,19 @@ def route(name: str, theory: Any, graph: Any, grain: float, same_draws: bool = T
     if few is not None:
         scores, words = Scores(LAWS["uniform"](), FEW), f"ranks of the shocks, {words}"
         return Route(name, scores, words, theory, graph, left, source=undone.source, few=few)
-    return Route(name, Scores(undone.source.law), words, theory, graph, grain, source=undone.source)
+    forgotten = None if getattr(theory, "mixture", None) is not None else soon_forgotten(undone.nodes, *size)
+    return Route(
+        name, Scores(undone.source.law), words, theory, graph, grain, source=undone.source, forgotten=forgotten
+    )
+
+
+def in_doubles(way: Route | Cannot, rounding: Rounding | None) -> Route | Cannot:
+    """The way to shocks of values that double precision itself rounds, which shows in few of its ways."""
+    if rounding is None or isinstance(way, Cannot):
+        return way
+    if way.kalman is None and rounding.share > (UNSPREAD if way.few is not None or way.ranked is not None else SPREAD):
+        return Cannot(str(rounding))
+    return replace(way, own=rounding.share if way.few is None else 0.0)
 
 
 def _by_filter(name: str, theory: Any, graph: Any, grain: float, system: Any) -> Route | Cannot:

@@ -15,8 +15,7 @@ from procgen.checks.parts import WORK, is_whole, plan_for, tasks, unpacked
 from procgen.checks.rectangles import Blocks, grouped, named
 from procgen.checks.tree import Tree
 from procgen.checks.verdict import Check
-from procgen.ensemble.cluster import opened
-from procgen.ensemble.engines import Progress, Work, default_workers
+from procgen.ensemble.engines import Progress, Work, default_workers, opened
 from procgen.ensemble.places import place_of
 
 WORTH = 16_000_000  # values that repay one more process: it derives the theory for itself
@@ -130,8 +129,9 @@ class EnsembleOrigin:
         no_cluster(scheduler)
         from procgen.checks.planning import plan_of
 
-        blocks = grouped(self.blocks(), self.ensemble.whole)
-        return in_one_process(plan_of(self.spec, self.steps, self.same_draws), blocks, self.ensemble.whole, progress)
+        whole = self.ensemble.whole
+        plan = plan_of(self.spec, self.steps, self.same_draws, whole.paths)
+        return in_one_process(plan, grouped(self.blocks(), whole), whole, progress)
 
     def blocks(self) -> Blocks:
         """The values of the series of `spec`, in row order."""
