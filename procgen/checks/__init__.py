@@ -7,7 +7,8 @@ goes through the values and leaves sums (`gather`); `judgement` makes checks of 
   `foreign`, `files`, `roles` (which column is what), `reshaped`, `clock`, `sizes`.
 - Plan. Where theory and data are compared: `probes`, `pools` (averages along paths), `relations` (combinations of
   series). What is known of the values: `atoms`, `smooth`, `support`, `rounding`, `missing`. How shocks are recovered:
-  `recover`, `undo` (numbers by path), `kalman` and `small` (sums), `few` (few values), `spans` (long paths, cut).
+  `recover`, `undo` (numbers by path), `kalman` and `small` (sums), `few` (few values), `short` (few steps), `spans`
+  (long paths, cut).
 - Sums. Their order, which no cut into parts may change: `blocks`, `tree`. Of values: `sums`, `structure`, `grids`,
   `copies`, `prints`, `repeated`, `extremes`. Of shocks: `scores` and `uniforms`, `shocks`, `stretches`, `farthest`,
   `pairs`, `tied` and `untied`. Of what has no such shocks: `errors`, `squares`, `neighbours`, `log_sizes`, `slow`,

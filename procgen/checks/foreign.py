@@ -153,7 +153,7 @@ class Table:
         from procgen.checks.source import no_cluster
 
         no_cluster(scheduler)
-        plan = self._plan = plan_of(self.spec, self.steps, self.same_draws)
+        plan = self._plan = plan_of(self.spec, self.steps, self.same_draws, self.paths)
         return in_one_process(plan, self.blocks(), Block(0, self.paths, 0, self.steps), progress)
 
     def blocks(self) -> Iterator[tuple[int, int, Mapping[str, np.ndarray]]]:

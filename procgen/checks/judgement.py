@@ -130,11 +130,11 @@ def _chance_of_equal(series: SeriesPlan, plan: Plan) -> float:
     few = few_shocks(series.theory)
     if few is not None and not series.grain:
         return few.same**plan.steps
-    if lumpy(series.theory):
-        return 1.0
     if series.may_stay:
         return 1.0
     step = plan.precision[plan.names.index(series.name)].possible.support.step
+    if lumpy(series.theory):
+        return _equal_lumps(series, step, plan.steps)
     if step and not series.grain:
         return _equal_on_lattice(series, step, plan.steps)
     if not np.isfinite(series.variance).all():
@@ -149,6 +149,18 @@ def _chance_of_equal(series: SeriesPlan, plan: Plan) -> float:
         moving = plan.steps - 1 if moving < len(series.steps) else plan.steps
     # Two normals of this sd fall in one cell with probability grain / (2 sqrt(pi) sd).
     return min(1.0, series.grain / (2 * math.sqrt(math.pi) * sd)) ** max(moving, 1) if sd else 1.0
+
+
+def _equal_lumps(series: SeriesPlan, step: float, steps: int) -> float:
+    """The same of values that have chances of their own: at a step Σ p² by their law, or more by what is new in it.
+
+    Two paths that have been equal so far have more in common than their law, and sticky values do: of both numbers the
+    larger one is taken, and a third of the steps. Where either is not known, equal paths are no wonder.
+    """
+    if not step or not series.scores:
+        return 1.0
+    by_law = [np.sum(scores.distribution.lumps[1] ** 2) for scores in series.scores.values()]
+    return max(max(by_law) or 1.0, _equal_on_lattice(series, step, 1)) ** (steps / 3)
 
 
 def _equal_on_lattice(series: SeriesPlan, step: float, steps: int) -> float:

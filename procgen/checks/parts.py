@@ -98,7 +98,7 @@ def _made(shared: Mapping[str, Any]) -> tuple[OnDisk, Plan]:
     ensemble = open_ensemble(shared["out"])
     if ensemble.digest != shared["manifest"]:
         raise EnsembleError(f"{shared['out']} was drawn again while it was being read; validate it again")
-    plan = plan_of(read_spec(shared["raw"]), ensemble.whole.steps, shared["same_draws"])
+    plan = plan_of(read_spec(shared["raw"]), ensemble.whole.steps, shared["same_draws"], ensemble.whole.paths)
     if plan.rounded:
         with contextlib.suppress(EnsembleError):  # what cannot be read is named when its part is gathered
             first = first_values(named(ensemble.blocks(), shared["columns"]), ensemble.whole)

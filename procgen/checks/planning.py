@@ -24,19 +24,22 @@ from procgen.checks.structure import Precision
 from procgen.checks.support import possible_of, vanishes
 
 
-def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True) -> Plan:
-    """Everything that the pass over the data must know, from the spec's theory; `same_draws` as for `route`."""
+def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True, paths: int | None = None) -> Plan:
+    """Everything that the pass over the data must know, from the spec's theory; `same_draws` as for `route`.
+
+    `paths`, `steps`: how many the data have, if not those of the spec.
+    """
     from procgen.terms.graph import build
     from procgen.theory import theory
 
     graph = build(spec)
     gaps = missing.taken_out(graph, spec)
     th = theory(spec, graph)
-    steps = steps or spec.time.steps
+    steps, paths = steps or spec.time.steps, paths or spec.paths
     series, routes, precision = [], {}, []
     for name, declared in spec.series.items():
         grain = _grain(declared, th[name], steps)
-        routes[name] = way = route(name, th[name], graph, grain, same_draws)
+        routes[name] = way = route(name, th[name], graph, grain, same_draws, (paths, steps))
         if isinstance(way, Route):
             way.salt = f" of seed {spec.seed}"
         plan = plan_series(name, th[name], steps, grain, _periods(graph, name), _unseen(way))

@@ -18,6 +18,7 @@ from procgen.checks.blocks import in_few
 from procgen.checks.few import Few, few_of
 from procgen.checks.kalman import Kalman
 from procgen.checks.scores import Scores
+from procgen.checks.short import soon_forgotten
 from procgen.checks.tied import shock_of
 
 LARGEST_STATE = 300  # elements of the state up to which a Kalman filter is run
@@ -61,6 +62,7 @@ class Route:
     ranked: float | None = None  # the grain, which ranks take in exactly, where ranks given the past stand for shocks
     hidden: bool = False  # whether these ranks follow states that are not seen
     few: Few | None = None  # how shocks of a law of few values are told apart; what comes out are then ranks
+    forgotten: float | None = None  # share of an unknown first variance that may be left in the shocks
     salt: str = ""  # told apart by it: what spreads the values of one seed is not what spreads those of another
     stopped: str = ""  # why a tile could not be undone
     _means: OrderedDict[tuple[int, int], NDArray] = field(default_factory=OrderedDict, repr=False)
@@ -74,7 +76,7 @@ class Route:
 
         if self.ranked is not None:
             return ranked(self.graph, self.series, self.theory, self.ranked)
-        return undone(self.graph, self.series, self.theory, first_path, paths)
+        return undone(self.graph, self.series, self.theory, first_path, paths, self.forgotten)
 
     def tile(self, x: NDArray, carrier: Any, first_path: int, first_step: int) -> tuple[NDArray, Any]:
         """Standardised shocks (steps, paths) of the next tile of values, and the carrier after it."""
@@ -154,10 +156,13 @@ def dither(first_path: int, paths: int, first_step: int, steps: int, series: str
     return (x >> np.uint64(11)).astype(float) * 2.0**-53 - (0.5 - 2.0**-54)
 
 
-def route(name: str, theory: Any, graph: Any, grain: float, same_draws: bool = True) -> Route | Cannot:
+def route(
+    name: str, theory: Any, graph: Any, grain: float, same_draws: bool = True, size: tuple[int, int] = (0, 0)
+) -> Route | Cannot:
     """The best way to the shocks of a series, or why there is none.
 
-    `same_draws`: whether path p of the data has the drawn parameters of path p of the spec.
+    `same_draws`: whether path p of the data has the drawn parameters of path p of the spec. `size`: numbers of paths
+    and steps, where few steps are to be made the most of.
     """
     from procgen.chance.laws import LAWS
     from procgen.checks.special import ranked
@@ -170,11 +175,11 @@ def route(name: str, theory: Any, graph: Any, grain: float, same_draws: bool = T
         return Cannot("the parameters of its paths are drawn, and not known of data that this spec has not drawn")
 
     system = theory.system() if theory.gaussian else None
-    size = len(system.initial) if system is not None and system.noise_path is None else LARGEST_STATE + 1
-    if size == 0 or (system is not None and not np.any(system.noise)):
+    states = len(system.initial) if system is not None and system.noise_path is None else LARGEST_STATE + 1
+    if states == 0 or (system is not None and not np.any(system.noise)):
         return Cannot("nothing is left to chance")
     undone = recovery(graph, name, 1)
-    if size <= (LARGEST_STATE if not undone else SMALL_STATE):
+    if states <= (LARGEST_STATE if not undone else SMALL_STATE):
         return _by_filter(name, theory, graph, grain, system)
     if isinstance(undone, Unknown):
         ranks = ranked(graph, name, theory, grain)
@@ -189,7 +194,10 @@ def route(name: str, theory: Any, graph: Any, grain: float, same_draws: bool = T
     if few is not None:
         scores, words = Scores(LAWS["uniform"](), FEW), f"ranks of the shocks, {words}"
         return Route(name, scores, words, theory, graph, left, source=undone.source, few=few)
-    return Route(name, Scores(undone.source.law), words, theory, graph, grain, source=undone.source)
+    forgotten = None if getattr(theory, "mixture", None) is not None else soon_forgotten(undone.nodes, *size)
+    return Route(
+        name, Scores(undone.source.law), words, theory, graph, grain, source=undone.source, forgotten=forgotten
+    )
 
 
 def _by_filter(name: str, theory: Any, graph: Any, grain: float, system: Any) -> Route | Cannot:

@@ -130,8 +130,9 @@ class EnsembleOrigin:
         no_cluster(scheduler)
         from procgen.checks.planning import plan_of
 
-        blocks = grouped(self.blocks(), self.ensemble.whole)
-        return in_one_process(plan_of(self.spec, self.steps, self.same_draws), blocks, self.ensemble.whole, progress)
+        whole = self.ensemble.whole
+        plan = plan_of(self.spec, self.steps, self.same_draws, whole.paths)
+        return in_one_process(plan, grouped(self.blocks(), whole), whole, progress)
 
     def blocks(self) -> Blocks:
         """The values of the series of `spec`, in row order."""

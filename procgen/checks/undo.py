@@ -33,8 +33,10 @@ class UndoneByPath:
         return np.concatenate(columns, axis=1)
 
 
-def undone(graph: Any, series: str, theory: Any, first_path: int, paths: int) -> Any:
+def undone(
+    graph: Any, series: str, theory: Any, first_path: int, paths: int, forgotten: float | None = None
+) -> Any:
     """What gives the shocks of a series from its values on a range of paths, or Unknown."""
     if getattr(theory, "mixture", None) is None:
-        return recovery(graph, series, paths)
+        return recovery(graph, series, paths, forgotten)
     return UndoneByPath(graph, series, first_path, paths)

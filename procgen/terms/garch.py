@@ -69,6 +69,7 @@ BEFORE = Parameter(
 class Garch(Conditional):
     kind = "garch"
     smooth = "filter"
+    forgotten = FORGOTTEN  # where it is to be undone sooner, a larger share
     purpose = "white shocks whose variance follows the squared shocks before them"
     source = "Bollerslev (1986); arch is its case without beta (Engle 1982); stationarity: Nelson (1990)"
     example = "garch: {sd: 6.3, alpha: 0.1, beta: 0.85}"
@@ -173,7 +174,7 @@ class Garch(Conditional):
         z = values / np.sqrt(h[q:])
         skip = int(state["skip"][0])
         if gap or (at[0] == 0 and self.before is None):  # an unknown start of the variance must be forgotten first
-            skip = gap + p + (decay_length(companion(self.beta, (), q, 0)[0], FORGOTTEN) if q else 0)
+            skip = gap + p + (decay_length(companion(self.beta, (), q, 0)[0], self.forgotten) if q else 0)
         z[:skip] = np.nan
         left = np.array([max(0, skip - len(values))])
         return z, {"square": square[len(square) - p :].copy(), "h": h[len(h) - q :].copy(), "skip": left}

@@ -46,6 +46,7 @@ def variance(e, omega, alpha, gamma, beta, variances, h):
 class GjrGarch(Conditional):
     kind = "gjr_garch"
     smooth = "filter"
+    forgotten = FORGOTTEN  # where it is to be undone sooner, a larger share
     purpose = "white shocks whose variance follows the square before, more so after a negative shock"
     source = "Glosten, Jagannathan & Runkle (1993); moments: He & Teräsvirta (1999)"
     example = "gjr_garch: {sd: 1.1, alpha: 0.03, gamma: 0.08, beta: 0.87}"
@@ -144,7 +145,7 @@ class GjrGarch(Conditional):
         z = values / np.sqrt(h)
         skip = int(state["skip"][0])
         if gap or (at[0] == 0 and self.before is None):  # an unknown start of the variance must be forgotten first
-            skip = gap + 1 + (decay_length(companion((self.beta,), (), 1, 0)[0], FORGOTTEN) if self.beta else 0)
+            skip = gap + 1 + (decay_length(companion((self.beta,), (), 1, 0)[0], self.forgotten) if self.beta else 0)
         z[:skip] = np.nan
         return z, {"h": following[None, :], "skip": np.array([max(0, skip - len(values))])}
 

@@ -6,6 +6,8 @@ part at each node must be known (deterministic), and is taken away with the valu
 
 from __future__ import annotations
 
+from copy import copy
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -20,8 +22,11 @@ def sources_below(graph: Graph, node: Any) -> list[Source]:
     return [part for part in graph.order([node]) if isinstance(part, Source)]
 
 
-def recovery(graph: Graph, series: str, paths: int) -> Recovery | Unknown:
-    """A way back from a series to its shocks, or why there is none."""
+def recovery(graph: Graph, series: str, paths: int, forgotten: float | None = None) -> Recovery | Unknown:
+    """A way back from a series to its shocks, or why there is none.
+
+    `forgotten`: the share of an unknown first variance that may be left in what comes out, if not the usual one.
+    """
     node, chain = graph.series[series], []
     found = sources_below(graph, node)
     if len(found) != 1:
@@ -32,9 +37,18 @@ def recovery(graph: Graph, series: str, paths: int) -> Recovery | Unknown:
             return Unknown(f"{node.name} reads the same shocks in {len(random)} places")
         if not node.term.undoes:
             return Unknown(f"{node.name} ({node.term.kind or 'hidden output'}) cannot be undone")
-        chain.append((node, random[0]))
+        chain.append((node if forgotten is None else _forgetting(node, forgotten), random[0]))
         node = node.inputs[random[0]]
     return Recovery(graph, chain, found[0], paths)
+
+
+def _forgetting(node: Node, share: float) -> Node:
+    """The node, which lets so much of an unknown first variance into what comes out, if it has one."""
+    if not hasattr(node.term, "forgotten"):
+        return node
+    term: Any = copy(node.term)
+    term.forgotten = share
+    return replace(node, term=term)
 
 
 class Recovery:
@@ -46,6 +60,7 @@ class Recovery:
     def __init__(self, graph: Graph, chain: list[tuple[Node, int]], source: Source, paths: int):
         self.source = source
         self._chain = chain
+        self.nodes = [node for node, _ in chain]
         self._states: list[Any] = [None] * len(chain)
         self._step = 0
         beside = [part for node, i in chain for k, part in enumerate(node.inputs) if k != i]
