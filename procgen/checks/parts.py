@@ -119,7 +119,7 @@ class _Chain:
     def blocks(self) -> Iterator[tuple[int, int, Values]]:
         """Blocks of whole lane groups; where a part cannot be read it ends, with a fault."""
         part = next(iter(self.parts.values()))
-        pieces = self.ensemble.stored(part.block.first_path, part.block.end_path)
+        pieces = self.ensemble.stored(part.block.first_path, part.block.end_path, room=self._bytes)
         try:
             for number, part in self.parts.items():
                 yield from self._in_step(self._pieces(number, part.block, pieces), part.block)
@@ -167,6 +167,9 @@ class _Chain:
                 rows[path : path + len(numbers), step : step + numbers.shape[1]] = numbers
                 out[name] = rows
         return part.first_path, part.first_step, out
+
+    def _bytes(self, name: str, size: int) -> NDArray[np.uint8]:
+        return self._kept("stored", name, (-(-size // 8),)).view(np.uint8)[:size]
 
     def _kept(self, kind: str, name: str, shape: tuple[int, ...]) -> NDArray:
         """An array whose memory is that of the last one of its kind and name, if it is large enough."""

@@ -308,6 +308,7 @@ class PoolLane:
             rows += [*(np.where(self.unknown, np.nan, self.below / width) - pool.shares.chances[:, None])]
         if self.slow is not None:
             rows.append(np.where(self.unknown, np.nan, self.slow.averages()))
+        self.window.close()
         return np.array(rows).T
 
     def _beside_slopes(self, sums: NDArray) -> None:
