@@ -15,8 +15,7 @@ from procgen.checks.parts import WORK, is_whole, plan_for, prepared, tasks, unpa
 from procgen.checks.rectangles import Blocks, grouped, named
 from procgen.checks.tree import Tree
 from procgen.checks.verdict import Check
-from procgen.ensemble.cluster import opened
-from procgen.ensemble.engines import Progress, Work, default_workers
+from procgen.ensemble.engines import Progress, Work, default_workers, opened
 from procgen.ensemble.places import place_of
 
 WORTH = 16_000_000  # values that repay one more process: it derives the theory for itself
