@@ -18,7 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.checks.gather import Gather, Plan
-from procgen.checks.lane import Pass, repays
+from procgen.checks.lane import Pass, get_ready, repays
 from procgen.checks.rectangles import Blocks, Values, first_values, grouped, named
 from procgen.ensemble import digest
 from procgen.ensemble.ensemble import OnDisk, open_ensemble
@@ -80,6 +80,11 @@ _making = threading.Lock()
 def plan_for(task: Mapping[str, Any]) -> Plan:
     """The plan of a task; the last one is kept, and each process derives it for itself."""
     return _context(task["shared"])[1]
+
+
+def prepared(task: Mapping[str, Any]) -> None:
+    """Make the plan and load what tasks need, so that workers forked from this process have both."""
+    get_ready(plan_for(task), task["shared"]["compile"])
 
 
 def _context(shared: Mapping[str, Any]) -> tuple[OnDisk, Plan]:
