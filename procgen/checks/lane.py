@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 
 from procgen.chance import kernel
 from procgen.checks import extremes, farthest, missing
-from procgen.checks.blocks import BLOCK, keep_memory
+from procgen.checks.blocks import BLOCK, WIDE, keep_memory
 from procgen.checks.gather import Gather, Plan
 from procgen.checks.pairs import Pairs
 from procgen.checks.pools import PoolLane
@@ -47,6 +47,17 @@ def are_kept() -> bool:
     tile, bits, places = np.empty((0, 0)), np.empty(0, dtype=np.uint64), np.empty(0, dtype=np.int64)
     many, one = (kernel.machine(module, "looked", __package__) for module in ("fused", "fused_few"))
     return many.is_kept(tile, bits, bits, places, places, places) or one.is_kept(tile[0:0].ravel(), 0, bits, places)
+
+
+def get_ready(plan: Plan, compile: bool) -> None:
+    """Load what every tile needs, such as machine code and tables of laws: sums over zeros are made and thrown away."""
+    with kernel.compiling(compile and kernel.available()):
+        sums, tile = Gather(plan), np.zeros((BLOCK, WIDE))
+        sums.structure.absorb(0, tile, 0, 0, np.zeros(WIDE, np.uint64))
+        for watch in sums.structure.watches(0, WIDE).values():
+            watch.absorb(tile)
+        for shocks in sums.shocks.values():
+            shocks.absorb(tile, 0, shocks.lane(WIDE))
 
 
 class Lane:

@@ -18,7 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.checks.gather import Gather, Plan
-from procgen.checks.lane import Pass, repays
+from procgen.checks.lane import Pass, get_ready, repays
 from procgen.checks.rectangles import Blocks, Values, first_values, grouped, named
 from procgen.ensemble import digest
 from procgen.ensemble.ensemble import OnDisk, open_ensemble
@@ -82,6 +82,11 @@ def plan_for(task: Mapping[str, Any]) -> Plan:
     return _context(task["shared"])[1]
 
 
+def prepared(task: Mapping[str, Any]) -> None:
+    """Make the plan and load what tasks need, so that workers forked from this process have both."""
+    get_ready(plan_for(task), task["shared"]["compile"])
+
+
 def _context(shared: Mapping[str, Any]) -> tuple[OnDisk, Plan]:
     with _making:
         key = json.dumps(shared)
@@ -119,7 +124,7 @@ class _Chain:
     def blocks(self) -> Iterator[tuple[int, int, Values]]:
         """Blocks of whole lane groups; where a part cannot be read it ends, with a fault."""
         part = next(iter(self.parts.values()))
-        pieces = self.ensemble.stored(part.block.first_path, part.block.end_path)
+        pieces = self.ensemble.stored(part.block.first_path, part.block.end_path, room=self._bytes)
         try:
             for number, part in self.parts.items():
                 yield from self._in_step(self._pieces(number, part.block, pieces), part.block)
@@ -167,6 +172,9 @@ class _Chain:
                 rows[path : path + len(numbers), step : step + numbers.shape[1]] = numbers
                 out[name] = rows
         return part.first_path, part.first_step, out
+
+    def _bytes(self, name: str, size: int) -> NDArray[np.uint8]:
+        return self._kept("stored", name, (-(-size // 8),)).view(np.uint8)[:size]
 
     def _kept(self, kind: str, name: str, shape: tuple[int, ...]) -> NDArray:
         """An array whose memory is that of the last one of its kind and name, if it is large enough."""

@@ -207,6 +207,20 @@ def _work(crew: Crew, work: Work, helping: int, inherit: int | None, advice: str
             helper.end()
 
 
+@contextlib.contextmanager
+def opened(
+    scheduler: str | None, workers: int | None, inherit: int | None = None, advice: str = FEWER
+) -> Iterator[Engine]:
+    """The engine that was asked for: a cluster, or this machine when there is no scheduler."""
+    if scheduler is None:
+        yield Here(workers or 1, inherit, advice)
+        return
+    from procgen.ensemble.cluster import joined
+
+    with joined(scheduler, workers) as cluster:
+        yield cluster
+
+
 def in_threads(
     work: Callable[[Any, Callable[[int], None]], Records],
     tasks: Sequence[Any],

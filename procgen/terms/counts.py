@@ -127,7 +127,9 @@ class Counts(Term):
         return axis.offering(counts, intensity=intensity)
 
     def equation(self, *inputs):
-        mean = number(self.mean) if len(inputs) == 1 else f"{number(self.mean)} exp({inputs[0]}[t])"
+        mean = number(self.mean) if len(inputs) == 1 else f"exp({inputs[0]}[t])"
+        if len(inputs) > 1 and self.mean != 1:
+            mean = f"{number(self.mean)} {mean}"
         return f"x[t] | m[t] {self.says()},  m[t] = {mean}"
 
 

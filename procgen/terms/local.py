@@ -108,6 +108,7 @@ class Holidays(Known):
 
     def equation(self, *inputs):
         count = len(self.days.single) + len(self.days.yearly)
+        days = "day" if count == 1 else "days"
         beside = [(self.day_before, "the day before"), (self.day_after, "the day after")]
         text = "".join(f", {number(size)} on {when}" for size, when in beside if size)
-        return f"x[t] = {number(self.size)} on {count} listed days{text}, else 0"
+        return f"x[t] = {number(self.size)} on {count} listed {days}{text}, else 0"

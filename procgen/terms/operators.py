@@ -111,7 +111,7 @@ class Integrate(Term):
     purpose = "the running sum of its body: y[0] is `start`, y[t] = y[t−1] + x[t]"
     source = "Box & Jenkins (1970), ch. 4"
     example = "integrate: {of: [{ar: {phi: 0.5, sd: 1}}], start: 100}"
-    knows = "mean and covariance at any steps of a linear body"
+    knows = "mean and covariance at any steps, from those of its body"
     composition = True
     parameters = (OF, Parameter("start", "y₀", Real(), "value at step 0", default=0.0, unit="series"))
 

@@ -29,8 +29,11 @@ def recovery(graph: Graph, series: str, paths: int, forgotten: float | None = No
     """
     node, chain = graph.series[series], []
     found = sources_below(graph, node)
-    if len(found) != 1:
-        return Unknown(f"{series} has {len(found)} sources of chance; one can be undone")
+    names = dict.fromkeys(source.name for source in found)
+    if len(names) > 1 or not found:
+        return Unknown(f"{series} has {len(names)} sources of chance; one can be undone")
+    if len(found) > 1:
+        return Unknown(f"{found[0].name} draws more than one number a step; one can be undone")
     while not isinstance(node, Source):
         random = [i for i, part in enumerate(node.inputs) if found[0] in sources_below(graph, part)]
         if len(random) != 1:

@@ -221,7 +221,7 @@ class Axis(Volatile, Stating, Bending):
 
         periods = x.mean_path.periods if not x.terms else None
         cycle = None if periods is None else frozenset(_coarser(p, k) for p in periods)
-        note = "; ".join(x.mean_path.notes) or f"the mean moves in {self.name}"
+        note = known.said(x.mean_path.notes) or f"the mean moves in {self.name}"
         path = known.whole(("every", self.name, k), lambda t: mean_at(x, step_of(t)), cycle, note)
         if not x.terms and all(s.centred for s in x.sources):
             path = known.whole(("every", self.name, k), lambda t: x.mean_path.at(step_of(t)), cycle, note)

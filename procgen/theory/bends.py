@@ -157,7 +157,7 @@ class Bending:
     def _of_known(self, x: Expression, f: Callable[[np.ndarray], np.ndarray]) -> Expression:
         if x.mean_path.value is not None:
             return Expression(self.space, known.constant(float(f(np.array(x.mean_path.value)))))
-        path, note = x.mean_path, "; ".join(x.mean_path.notes)
+        path, note = x.mean_path, known.said(x.mean_path.notes)
         whole = known.whole(("of", self.name, path.key), lambda t: f(path.at(t)), path.periods, note)
         return Expression(self.space, whole)
 

@@ -10,7 +10,7 @@ import numpy as np
 from procgen.theory import longhand
 from procgen.theory.arma import WEAK, CrossCovariance, cross_covariance
 from procgen.theory.linear import At, Base, Linear, Season, Sum, base_of
-from procgen.theory.processes import mixed
+from procgen.theory.running import mixed
 from procgen.theory.sources import PROCESS, Space
 from procgen.theory.system import LARGEST_STATE, state_size, system_of
 from procgen.theory.unknown import Unknown

@@ -120,7 +120,7 @@ def distributed_mean(name: str, x: Any, phi: Sequence[float], memory: int) -> Kn
         return found[which].reshape(np.shape(steps))
 
     key, path = ("distributed", name), x.mean_path
-    note = "; ".join(path.notes) or f"the mean moves in {name}"
+    note = known.said(path.notes) or f"the mean moves in {name}"
     if centred and not x.terms and path.periods is None:
         return known.observed(key, at, x.space.horizon, name, settles=path.settles, note=note)
     return known.whole(key, at, path.periods if not x.terms else None, note, path.settles)

@@ -6,12 +6,13 @@ a pattern minus itself one period ago is nothing.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass, field
 from math import lcm
 
 import numpy as np
 
+from procgen.terms.base import number
 from procgen.theory.unknown import Unknown
 
 Steps = np.ndarray
@@ -88,7 +89,8 @@ class Known:
     @property
     def notes(self) -> tuple[str, ...]:
         """What makes it move, in words."""
-        line = (f"trend slope {self.slope:.6g} a step in {', '.join(self.names) or 'its mean'}",) if self.slope else ()
+        where = ", ".join(self.names) or "its mean"
+        line = (f"trend slope {number(self.slope)} a step in {where}",) if self.slope else ()
         return (*line, *dict.fromkeys(p.note for p in self.pieces))
 
     def __call__(self, steps: Steps) -> np.ndarray:
@@ -130,14 +132,14 @@ class Known:
         mine, others = self.periods, other.periods
         periods = None if mine is None or others is None else mine | others
         keys = sorted((self.key, other.key), key=repr)
-        note = "; ".join(dict.fromkeys(self.notes + other.notes))
+        note = said(self.notes + other.notes)
         settles = self.settles and other.settles
         return whole(("*", *keys), lambda t: self.at(t) * other.at(t), periods, note, settles)
 
     def exp(self) -> Known:
         if self.value is not None:
             return constant(float(_exp(self.value)))
-        note = "; ".join(self.notes)
+        note = said(self.notes)
         return whole(("exp", self.key), lambda t: _exp(self.at(t)), self.periods, note, self.settles)
 
     def lag(self, by: int) -> Known:
@@ -166,6 +168,11 @@ class Known:
         size = abs(self.level) + sum(np.abs(c * piece.at(steps)).max() for piece, c in self.pieces.items())
         line = _line(steps, values, ROUNDING * float(size))
         return self if line is None else Known(*line, names=(*self.names, *(p.note for p in self.pieces)))
+
+
+def said(notes: Iterable[str]) -> str:
+    """Notes in one, each once, also where some are several in one."""
+    return "; ".join(dict.fromkeys(note for several in notes for note in several.split("; ")))
 
 
 def constant(value: float) -> Known:

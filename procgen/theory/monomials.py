@@ -10,6 +10,7 @@ import numpy as np
 from procgen.theory import wick
 from procgen.theory.known import Known
 from procgen.theory.linear import At, Linear
+from procgen.theory.running import steady
 from procgen.theory.sources import Source, Space
 from procgen.theory.unknown import Unknown
 
@@ -72,16 +73,16 @@ def covariance(space: Space, m: Term, n: Term, t: np.ndarray, s: np.ndarray) -> 
     known_part = m.coefficient(t) * n.coefficient(s)
     if m.summed is None and n.summed is None:
         return known_part * wick.joint(space, (m.factors, m.exponent), (n.factors, n.exponent), t, s)[1]
-    if _sums_of_steady(m) and _sums_of_steady(n):
+    if _sums_of_steady(space, m) and _sums_of_steady(space, n):
         return known_part * _double_sum(space, m, n, t, s)
     return known_part * _table(space, m, n, _last(t, LARGEST_TABLE) + 1, _last(s, LARGEST_TABLE) + 1)[t, s]
 
 
-def _sums_of_steady(term: Term) -> bool:
+def _sums_of_steady(space: Space, term: Term) -> bool:
     """Whether a term, or what it sums once, has a covariance that depends on the lag alone."""
     inner = term if term.summed is None else term.summed
     forms = (*inner.factors, inner.exponent)
-    plain = all(form.is_plain and all(isinstance(key, At) for key in form) for form in forms)
+    plain = all(isinstance(key, At) for form in forms for key in form) and all(steady(space, form) for form in forms)
     return plain and inner.summed is None and (inner is term or not inner.knowns)
 
 

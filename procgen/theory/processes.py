@@ -12,8 +12,8 @@ from typing import Any
 
 import numpy as np
 
-from procgen.theory.linear import At, Base, Key, Linear, base_of
-from procgen.theory.sources import PROCESS, Source, Space
+from procgen.theory.linear import At, Base, Linear, base_of
+from procgen.theory.sources import Source, Space
 from procgen.theory.unknown import Unknown
 
 Steps = np.ndarray
@@ -98,11 +98,17 @@ class Chain(Process):
 
 
 class Held(Process):
-    """An expression read at other steps: x(t) = y(step_of(t)), less its mean."""
+    """An expression read at other steps: x(t) = y(step_of(t)), less its mean; jointly Gaussian where it is."""
 
     def __init__(self, name: str, body: Any, step_of: Callable[[Steps], Steps], says: tuple[tuple[str, str], ...]):
         super().__init__(name, (body,), says)
         self.body, self.step_of, self.lumpy = body, step_of, body.lumpy
+
+    @property
+    def gaussian(self) -> bool:  # type: ignore[override]
+        from procgen.theory.laws import is_gaussian
+
+        return is_gaussian(self.body)
 
     def covariance(self, t, s):
         return at_any(self.body, self.body, self.step_of(t), self.step_of(s))
@@ -124,18 +130,12 @@ class Held(Process):
 
 
 class Seen(Held):
-    """An expression on finer steps, read at some of them; jointly Gaussian where it is."""
+    """An expression on finer steps, read at some of them."""
 
     def __init__(self, name: str, body: Any, step_of: Callable[[Steps], Steps]):
         super().__init__(name, body, step_of, ())
         if not body.terms:  # how its mean moves is no part of how it varies
             self.ingredients = (_expression(body.space, body.linear),)
-
-    @property
-    def gaussian(self) -> bool:  # type: ignore[override]
-        from procgen.theory.laws import is_gaussian
-
-        return is_gaussian(self.body)
 
 
 class Hinged(Process):
@@ -154,7 +154,7 @@ class Hinged(Process):
         sd = np.sqrt(np.maximum(at_any(self.body, self.body, steps, steps), 0.0))
         mean = mean_at(self.body, steps)
         with np.errstate(divide="ignore", invalid="ignore"):
-            return sd, np.where(sd > 0.0, -mean / sd, -np.inf * np.sign(mean))
+            return sd, np.where(sd > 0.0, -mean / sd, np.where(mean > 0.0, -np.inf, np.inf))
 
     def mean(self, steps: Steps) -> np.ndarray:
         """E max(x, 0)."""
@@ -338,48 +338,3 @@ def _expression(space: Space, form: Linear) -> Any:
     from procgen.theory.known import constant
 
     return Expression(space, constant(0.0), form)
-
-
-Plain = Callable[[Space, Linear, Linear, Steps, Steps], np.ndarray]
-
-
-def mixed(space: Space, x: Linear, y: Linear, t: Steps, s: Steps, plain: Plain) -> np.ndarray:
-    """Cov(x(t), y(s)) of forms with processes among their sources."""
-    (rest_x, own_x), (rest_y, own_y) = _split(x), _split(y)
-    total = plain(space, rest_x, rest_y, t, s) if rest_x and rest_y else np.zeros(t.shape)
-    for (p, d), c in own_x.items():
-        for (q, e), k in own_y.items():
-            total = total + c * k * _pair(space, p, q, t - d, s - e)
-        total = total + c * _against(space, p, rest_y, t - d, s)
-    for (q, e), k in own_y.items():
-        total = total + k * _against(space, q, rest_x, s - e, t)
-    return total
-
-
-def _split(form: Linear) -> tuple[Linear, dict[tuple[Source, int], float]]:
-    rest: dict[Key, float] = {}
-    own: dict[tuple[Source, int], float] = {}
-    for key, c in form.items():
-        source = base_of(key).source
-        if source.kind != PROCESS:
-            rest[key] = c
-        elif isinstance(key, At) and not key.base.phi:
-            own[source, key.delay] = c
-        else:
-            raise Unknown(f"a running sum or a filter of {source.detail.name} has no closed covariance")
-    return Linear(rest), own
-
-
-def _pair(space: Space, p: Source, q: Source, t: Steps, s: Steps) -> np.ndarray:
-    if p is q:
-        return p.detail.covariance(t, s)
-    if not space.dependent(p, q):
-        return np.zeros(t.shape)
-    if q.detail.filters and not p.detail.filters and not any(q in x.sources for x in p.detail.ingredients):
-        return q.detail.with_process(q, p, s, t)
-    return p.detail.with_process(p, q, t, s)
-
-
-def _against(space: Space, p: Source, form: Linear, t: Steps, s: Steps) -> np.ndarray:
-    form = form.only(source for source in form.sources if space.dependent(p, source))
-    return p.detail.with_expression(_expression(space, form), t, s) if form else np.zeros(t.shape)

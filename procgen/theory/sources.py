@@ -75,6 +75,7 @@ class Space:
     sources: dict[str, Source] = field(default_factory=dict)
     origins: dict[Any, str] = field(default_factory=dict)  # where a running sum was written, by its key
     last: dict[Any, Any] = field(default_factory=dict)  # the state space that was asked last, by its forms
+    sums: dict[Any, Any] = field(default_factory=dict)  # covariances of running sums, see `running`
     ties: Mapping[frozenset[str], Tie] = field(default_factory=dict)  # of those that are not jointly normal
 
     def add(self, source: Source) -> Source:

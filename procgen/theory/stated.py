@@ -313,7 +313,7 @@ def _mean_path(level: Expression, name: str) -> Known:
         term.summed for term in level.terms
     )
     cycle = frozenset().union(*periods) if still and len(periods) == len(paths) else None
-    notes = "; ".join(dict.fromkeys(note for path in paths for note in path.notes)) or f"the mean moves in {name}"
+    notes = known.said(note for path in paths for note in path.notes) or f"the mean moves in {name}"
     return known.whole(("mean of", name), lambda steps: mean_at(level, np.asarray(steps, np.int64)), cycle, notes)
 
 

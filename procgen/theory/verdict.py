@@ -18,7 +18,7 @@ import numpy as np
 
 from procgen.theory.arma import spectral_radius
 from procgen.theory.expression import Expression
-from procgen.theory.known import Known
+from procgen.theory.known import Known, said
 from procgen.theory.linear import At, Frozen, Key, Linear, Season, Sum, base_of
 from procgen.theory.monomials import Term
 from procgen.theory.sources import GARCH, OPAQUE, PROCESS, SQUARES, Source, Space
@@ -111,7 +111,7 @@ def _random_parts(findings: _Findings, x: Expression) -> None:
 def _term(findings: _Findings, term: Term) -> None:
     for factor in term.knowns:
         cyclic = factor.periods is not None
-        why = "; ".join(factor.notes) or "known as it is"
+        why = said(factor.notes) or "known as it is"
         if factor.settles:
             findings.say(SETTLES, f"a random part is multiplied by what settles ({why})")
         elif cyclic:
@@ -206,7 +206,8 @@ def _heteroskedastic(findings: _Findings, source: Source) -> None:
         stands = {True: "strictly stationary", False: "not stationary", None: "strict stationarity open"}[strict]
         findings.say(INFINITE, f"{name} has no finite {moment}; {stands}: {why}")
         return
-    findings.notes.append(f"{name} is uncorrelated but not independent: its conditional variance moves")
+    # A shock goes by the name of the term that it drives, whose own values may be correlated.
+    findings.notes.append(f"shocks of {name} are uncorrelated but not independent: their conditional variance moves")
 
 
 def _frozen(findings: _Findings, x: Expression) -> None:

@@ -17,7 +17,7 @@ import numpy as np
 
 from procgen.theory import cumulants, exponentials
 from procgen.theory.covariance import covariance
-from procgen.theory.linear import Linear
+from procgen.theory.linear import At, Linear
 from procgen.theory.sources import GARCH, IID, OPAQUE, PROCESS, Source, Space
 from procgen.theory.unknown import Unknown
 
@@ -160,6 +160,8 @@ def _few_moments(space, group, factors, tilts, t, s) -> Pair:
     if order == 2:
         return _gaussian(space, factors, tilts, t, s)
     if all(source.kind == PROCESS for source in group):
+        if any(not isinstance(key, At) for form, _ in factors for key in form):
+            raise Unknown(f"moments of order {order} of running sums of {_names(group)} are not known in closed form")
         return group[0].detail.product(factors, t, s)
     if order > 4 or one is None or one.kind != IID:
         raise Unknown(f"moments of order {order} of {_names(group)} are not known in closed form")

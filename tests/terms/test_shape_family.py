@@ -135,6 +135,18 @@ def test_verdicts_name_what_moves():
     assert "held for 5 steps in h.hold" in th["h"].stationarity.reasons
 
 
+def test_what_is_held_is_jointly_normal_where_its_body_is():
+    """Values read at other steps are some of the body's own; the mean of an exponential is a normal law's."""
+    graph = graph_of(
+        "  x: [{hold: {of: [{ar: {phi: 0.8, sd: 0.6}}], every: 5}}, {white_noise: {sd: 2}}]\n"
+        "  y: [{exp: [{use: x}]}]\n  z: {hold: {of: [{white_noise: {sd: 1, law: laplace}}], every: 5}}"
+    )
+    th = theory(graph.spec, graph)
+    assert th["x"].gaussian and not th["z"].gaussian
+    assert th["x"].marginal(7).std() == pytest.approx(np.sqrt(1 + 4))
+    np.testing.assert_allclose(th["y"].mean([0, 7]), np.exp(2.5), rtol=1e-12)
+
+
 @pytest.mark.parametrize(
     ("term", "sentence"),
     [

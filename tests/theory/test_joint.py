@@ -152,3 +152,12 @@ def test_a_law_is_judged(name):
     verdict = pg.validate(pg.render(true), false_alarm=1e-8)
     assert verdict.agrees is not False and any(row.what == "law" and row.outcome == "agrees" for row in verdict.rows)
     assert pg.validate(pg.render(false).to_pandas(), true, false_alarm=1e-8).agrees is False
+
+
+def test_the_larger_of_a_value_and_of_the_one_that_is_held():
+    """At the steps that are read both are one; between them as Clark (1961) has it, of two with covariance c."""
+    body = of_two("max", {"hold": {"of": [{"use": "w"}], "every": 4}}, {"use": "w"})
+    known, v = pg.theory(spec(body, shared={"w": [{"ar": {"phi": 0.5, "sd": 1}}]}))["x"], 4 / 3
+    theta = np.sqrt(2 * v * (1 - 0.5 ** np.arange(4)))
+    np.testing.assert_allclose(known.mean(np.arange(4)), theta / np.sqrt(2 * np.pi), rtol=1e-12)
+    np.testing.assert_allclose(known.variance(np.arange(4)), v - theta**2 / (2 * np.pi), rtol=1e-12)

@@ -198,13 +198,14 @@ def test_fourth_moments_of_a_chain():
     assert two.excess_kurtosis == pytest.approx(float(stats.bernoulli(p).stats("k")) / 2, rel=1e-9)
 
 
-def test_a_chain_times_noise_is_exact_and_a_sum_of_it_is_not_known():
+def test_a_chain_times_noise_and_a_sum_of_it_are_exact():
     axis = Axis()
     chain, noise = axis.chain("x.flag", UNIFORM, 0.25, 0.5), axis.source("x.e", NORMAL, 2.0)
     gated = SeriesTheory("x", axis.product([chain, noise]))
     np.testing.assert_allclose(gated.autocovariance(np.arange(3)), [0.25 * 4, 0, 0], atol=1e-15)
     total = SeriesTheory("y", chain.integrate(0.0))
-    assert total.variance(STEPS) is None and "running sum" in total.reason("variance")
+    pairs = [0.25 * 0.75 * 0.5 ** np.abs(np.subtract.outer(np.arange(t), np.arange(t))) for t in STEPS]
+    np.testing.assert_allclose(total.variance(STEPS), [each.sum() for each in pairs], rtol=1e-12)
 
 
 def test_held_reads_the_covariance_of_its_body():
