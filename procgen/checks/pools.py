@@ -226,6 +226,8 @@ def _shares(plan: Any, step: int) -> Shares | None:
     if atoms_of(law):
         return None
     points = np.asarray(law.ppf(np.array(QUANTILES)), float)
+    if plan.grain and plan.grain <= np.spacing(np.abs(points).max()):  # no number lies between two of its own
+        return None
     if plan.grain:
         points = (np.floor(points / plan.grain) + 0.5) * plan.grain
     chances = np.asarray(law.cdf(points), float)

@@ -14,7 +14,8 @@ raises `unknown`, with its reason.
   `bootstrap`.
 - Laws at one step: `laws`, `counted`, `lumps` (values with a chance of their own), `mixtures`, `joint`, `stable`,
   `characteristic`, `averages`.
-- What is asked of a series: `memory`, `spectrum`, `horizon` with `filtering`, `verdict` (is it stationary).
+- What is asked of a series: `memory`, `spectrum`, `horizon` with `filtering`, `verdict` (is it stationary), `doubles`
+  (what their rounding hides).
 - Drawn parameters, averaged over their law: `varied`, `quadrature`, `mixed`, `mixedseries`, `mixedlaw`, `mixedlumps`.
 """
 

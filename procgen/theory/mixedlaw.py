@@ -80,6 +80,9 @@ class Normal:
     mean: float = 0.0
     sd: float = 1.0
 
+    def support(self) -> tuple[float, float]:
+        return -np.inf, np.inf
+
     def pdf(self, x: Any) -> NDArray:
         z = (np.asarray(x, float) - self.mean) / self.sd
         return np.exp(-0.5 * z * z) / (self.sd * np.sqrt(2 * np.pi))
