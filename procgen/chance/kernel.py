@@ -226,15 +226,19 @@ def machine(module: str, function: str, room: str = __package__) -> Machine:
 
     The module may depend on this room alone.
     """
-    files = sorted(Path(__file__).parent.glob("*.py"))
+    text = _room_text()
     if room != __package__:
-        files.append(Path(import_module(room).__path__[0]) / f"{module}.py")
-    text = "".join([file.read_text(encoding="utf-8") for file in files])
+        text += (Path(import_module(room).__path__[0]) / f"{module}.py").read_text(encoding="utf-8")
 
     def given() -> Callable:
         return getattr(import_module(f"{room}.{module}"), function)
 
     return Machine(f"{module}.{function}", text, given, cache_folder)
+
+
+@cache
+def _room_text() -> str:
+    return "".join([file.read_text(encoding="utf-8") for file in sorted(Path(__file__).parent.glob("*.py"))])
 
 
 @cache

@@ -50,6 +50,17 @@ def room(sizes: tuple[int, ...]) -> tuple[NDArray, ...]:
     return kept[sizes]
 
 
+def borrowed(size: int) -> NDArray:
+    """Memory that lives longer than a call: that of the last one of this size that was given back, if there is one."""
+    free: dict[int, list[NDArray]] = _local.__dict__.setdefault("free", {})
+    return free[size].pop() if free.get(size) else np.empty(size)
+
+
+def give_back(memory: NDArray) -> None:
+    """Let `borrowed` lend this memory again: nothing looks at it any more."""
+    _local.__dict__.setdefault("free", {}).setdefault(memory.size, []).append(memory)
+
+
 def compiled(paths: int) -> bool:
     """Whether tiles of so many paths go through compiled passes."""
     return is_compiling() and paths >= WIDE
@@ -145,7 +156,7 @@ class Window:
     """The last rows of something that comes tile by tile, and the newest tile behind them, in one array."""
 
     def __init__(self, reach: int, paths: int):
-        self.reach, self.held = reach, 0
+        self.reach, self.held, self.paths = reach, 0, paths
         self._rows, self._end = np.empty((0, paths)), 0
 
     def push(self, rows: NDArray) -> NDArray:
@@ -164,10 +175,22 @@ class Window:
         return view
 
     def _make_room(self, count: int) -> None:
-        size = self.reach + max(2 * count, 2 * BLOCK, self.reach)
-        rows = self._rows if len(self._rows) >= size else np.empty((size, self._rows.shape[1]))
-        rows[: self.held] = self._rows[self._end - self.held : self._end].copy()
+        size = self.reach + max(count, 2 * BLOCK, self.reach)
+        old, rows = self._rows, self._rows if len(self._rows) >= size else _rows(size, self.paths)
+        rows[: self.held] = old[self._end - self.held : self._end].copy()
+        if rows is not old:
+            self.close()
         self._rows, self._end = rows, self.held
+
+    def close(self) -> None:
+        """Give the memory back."""
+        if self._rows.size:
+            give_back(self._rows.reshape(-1))
+            self._rows = self._rows[:0]
+
+
+def _rows(size: int, paths: int) -> NDArray:
+    return borrowed(size * paths).reshape(size, paths)
 
 
 def add_lagged(total: NDArray, later: NDArray, earlier: NDArray, lag: int, steps: int, offset: int = 0) -> int:

@@ -60,10 +60,10 @@ def unit(z: float, error: float, theory: float = 0.0, skew: float = 0.0, excess:
     )
 
 
-def normal_mean(mean: float, mu: float, sd: float, n: int) -> Finding:
-    """The mean of n independent normals of known standard deviation: exact."""
+def normal_mean(off: float, mu: float, sd: float, n: int) -> Finding:
+    """The mean of n independent normals of known standard deviation, which is off by `off` from `mu`: exact."""
     error = sd / math.sqrt(n)
-    return Finding(mu, mean, error, tails.normal((mean - mu) / error), lambda level: power.shift(level, error))
+    return Finding(mu, mu + off, error, tails.normal(off / error), lambda level: power.shift(level, error))
 
 
 def variance(s2: float, sigma2: float, dof: int) -> Finding:

@@ -71,7 +71,7 @@ def _average(plan: SeriesPlan, pool: Pool, k: int, lag: int, sample: Sample) -> 
     kind = "level" if lag < 0 else "spread" if lag == 0 else "memory"
     if pool.exact is not None:
         if lag < 0:
-            finding = judge.normal_mean(theory + sample.mean, theory, math.sqrt(float(pool.exact[0, 0])), sample.n)
+            finding = judge.normal_mean(sample.mean, theory, math.sqrt(float(pool.exact[0, 0])), sample.n)
         else:
             finding = judge.quadratic(theory + sample.mean, pool.exact[k], sample.n)
         return Check.of(plan.name, what, probe, kind, finding)

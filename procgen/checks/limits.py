@@ -11,6 +11,7 @@ from procgen.checks.sums import Powers
 from procgen.checks.verdict import Check
 from procgen.checks.words import many
 
+_MOVES = 0.1  # share of the stated spread of a number from which on it moves as stated, however large it is
 _STILL = {1: 1e-9, 2: 1e-7}  # by order: a spread below this share of the stated value is one of rounding
 
 
@@ -48,7 +49,8 @@ def limit(
         )
         note = f"{bound}: the tail of this estimate is not that of a central limit theorem"
         return Check(plan.name, what, probe, kind, theory, theory + sample.mean, outcome="untestable", note=note)
-    if sample.n >= FEW_PATHS and sample.sd <= _STILL[order] * abs(theory):
+    still = sd is None or sample.sd < _MOVES * sd
+    if sample.n >= FEW_PATHS and still and sample.sd <= _STILL[order] * abs(theory):
         note = "it is the same on every path but for rounding: reported, not judged"
         return Check(plan.name, what, probe, kind, theory, theory + sample.mean, outcome="reported", note=note)
     if sample.n < FEW_PATHS or sample.sd == 0.0:

@@ -15,7 +15,7 @@ from procgen.checks.extremes import Reach
 from procgen.checks.gather import Plan
 from procgen.checks.neighbours import plan_neighbours
 from procgen.checks.probes import PAIR_LIMIT, SeriesPlan, plan_cross, plan_series
-from procgen.checks.recover import Cannot, Expected, Route, expected, route
+from procgen.checks.recover import Cannot, Expected, Route, expected, in_doubles, route
 from procgen.checks.relations import plan_relations
 from procgen.checks.smooth import smooth
 from procgen.checks.special import lumpy
@@ -31,6 +31,7 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True, paths:
     """
     from procgen.terms.graph import build
     from procgen.theory import theory
+    from procgen.theory.doubles import rounding_of
 
     graph = build(spec)
     gaps = missing.taken_out(graph, spec)
@@ -38,17 +39,21 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True, paths:
     steps, paths = steps or spec.time.steps, paths or spec.paths
     series, routes, precision = [], {}, []
     for name, declared in spec.series.items():
-        grain = _grain(declared, th[name], steps)
-        routes[name] = way = route(name, th[name], graph, grain, same_draws, (paths, steps))
+        doubles = rounding_of(th, name, steps)
+        grain = max(_grain(declared, th[name], steps), 0.0 if doubles is None else doubles.cell)
+        lost = str(doubles) if doubles is not None and doubles.hides else ""
+        found = Cannot(lost) if lost else route(name, th[name], graph, grain, same_draws, (paths, steps))
+        routes[name] = way = in_doubles(found, doubles)
         if isinstance(way, Route):
             way.salt = f" of seed {spec.seed}"
-        plan = plan_series(name, th[name], steps, grain, _periods(graph, name), _unseen(way))
+        plan = plan_series(name, th[name], steps, grain, _periods(graph, name), _unseen(way), lost)
         flat = flattened(th, name, steps)
-        plan.may_stay = may_stay(th[name], graph, name, flat)
+        plan.may_stay = bool(lost) or may_stay(th[name], graph, name, flat)
         plan.smooth = smooth(graph, name, steps, flat)
         plan.within = known_within(th, name, steps)
         series.append(plan)
         stored = _precision(declared, graph, plan, bool(flat), steps, spec.paths * steps)
+        stored.cell, stored.reach = (0.0 if doubles is None else doubles.cell), (None if lost else stored.reach)
         if stored.random:
             stored.repeats = repeats_of(plan, way, graph, stored.discrete, spec.paths * steps)
         precision.append(stored)

@@ -226,6 +226,8 @@ def _shares(plan: Any, step: int) -> Shares | None:
     if atoms_of(law):
         return None
     points = np.asarray(law.ppf(np.array(QUANTILES)), float)
+    if plan.grain and plan.grain <= np.spacing(np.abs(points).max()):  # no number lies between two of its own
+        return None
     if plan.grain:
         points = (np.floor(points / plan.grain) + 0.5) * plan.grain
     chances = np.asarray(law.cdf(points), float)
@@ -308,6 +310,7 @@ class PoolLane:
             rows += [*(np.where(self.unknown, np.nan, self.below / width) - pool.shares.chances[:, None])]
         if self.slow is not None:
             rows.append(np.where(self.unknown, np.nan, self.slow.averages()))
+        self.window.close()
         return np.array(rows).T
 
     def _beside_slopes(self, sums: NDArray) -> None:

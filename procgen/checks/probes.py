@@ -183,12 +183,22 @@ class Marginal:
 
 
 def plan_series(
-    name: str, theory: Any, steps: int, grain: float, periods: Sequence[int], blind: bool = False
+    name: str,
+    theory: Any,
+    steps: int,
+    grain: float,
+    periods: Sequence[int],
+    blind: bool = False,
+    hidden: str = "",
 ) -> SeriesPlan:
-    """The plan of one series from its theory; `blind` when its shocks cannot be recovered."""
+    """The plan of one series from its theory; `blind` when its shocks cannot be recovered.
+
+    `hidden` says why its values do not show what theory knows, where they do not.
+    """
     at = np.array(probe_steps(steps), dtype=np.int64)
-    mean, variance = theory.mean(at), theory.variance(at)
-    unknown = [theory.reason(what) or "not known" for what, x in (("mean", mean), ("variance", variance)) if x is None]
+    mean, variance = (None, None) if hidden else (theory.mean(at), theory.variance(at))
+    both = (("mean", mean), ("variance", variance))
+    unknown = [hidden or theory.reason(what) or "not known" for what, x in both if x is None]
     blank = np.full(len(at), np.nan)
     plan = SeriesPlan(
         name,
@@ -200,6 +210,8 @@ def plan_series(
         "; ".join(dict.fromkeys(unknown)),
         probe_pairs(at.tolist()),
     )
+    if hidden:
+        return plan
     plan.highest = float(theory.highest_moment or 0.0)
     plan.gaussian = bool(theory.gaussian)
     plan.period = next((p for p in periods if 1 < p < steps), None)

@@ -20,10 +20,13 @@ from procgen.checks.kalman import Kalman
 from procgen.checks.scores import Scores
 from procgen.checks.short import soon_forgotten
 from procgen.checks.tied import shock_of
+from procgen.theory.doubles import Rounding
 
 LARGEST_STATE = 300  # elements of the state up to which a Kalman filter is run
 SMALL_STATE = 64  # up to here it is preferred to undoing: it also knows how the series starts
 COARSE = 0.5  # rounding beyond this share of the shock's standard deviation hides the shock
+SPREAD = 2e-3  # the same of double precision's own rounding, which shocks show but in part
+UNSPREAD = 1e-6  # the same where they cannot be spread over its cells
 SPAN = 50  # lags over which correlations between two series' shocks are followed
 _CACHED = 1 << 18  # means of steps that are kept
 FEW = ("among the law's values", "are none of the values of the stated law", "every shock is one of them")
@@ -65,6 +68,7 @@ class Route:
     forgotten: float | None = None  # share of an unknown first variance that may be left in the shocks
     salt: str = ""  # told apart by it: what spreads the values of one seed is not what spreads those of another
     stopped: str = ""  # why a tile could not be undone
+    own: float = 0.0  # the grain over the sd of shocks, where it is double precision's own: no value lies within a cell
     _means: OrderedDict[tuple[int, int], NDArray] = field(default_factory=OrderedDict, repr=False)
 
     def start(self, first_path: int, paths: int) -> Any:
@@ -85,13 +89,19 @@ class Route:
             with np.errstate(all="ignore"):
                 z = carrier.tile(x, v)
             return self._taken(z, x, carrier)
-        if self.grain:
+        if self.own and self.kalman is not None:  # what is spread is the distance from the mean
+            x = x - self._mean(first_step, len(x))[:, None]
+            x += self.grain * self._dither(x, first_path, first_step)
+            return self.kalman.innovations(x, carrier, first_step)
+        if self.grain and not self.own:
             x = x + self.grain * self._dither(x, first_path, first_step)
         if self.kalman is not None:
             return self.kalman.innovations(x, carrier, first_step, self._mean(first_step, len(x)))
         if carrier is not None:
             with np.errstate(all="ignore"):
                 z = carrier.tile(x)
+            if self.own and isinstance(z, np.ndarray):
+                z = z + self.own * self._dither(x, first_path, first_step)
             if self.few is not None and isinstance(z, np.ndarray):
                 z = self.few.ranks(z, self._dither(x, first_path, first_step, " ") + 0.5)
             return self._taken(z, x, carrier)
@@ -198,6 +208,15 @@ def route(
     return Route(
         name, Scores(undone.source.law), words, theory, graph, grain, source=undone.source, forgotten=forgotten
     )
+
+
+def in_doubles(way: Route | Cannot, rounding: Rounding | None) -> Route | Cannot:
+    """The way to shocks of values that double precision itself rounds, which shows in few of its ways."""
+    if rounding is None or isinstance(way, Cannot):
+        return way
+    if way.kalman is None and rounding.share > (UNSPREAD if way.few is not None or way.ranked is not None else SPREAD):
+        return Cannot(str(rounding))
+    return replace(way, own=rounding.share if way.few is None else 0.0)
 
 
 def _by_filter(name: str, theory: Any, graph: Any, grain: float, system: Any) -> Route | Cannot:

@@ -70,6 +70,12 @@ class ShockLane:
             self._earlier += two[:-11]
         return self._earlier
 
+    def close(self) -> None:
+        """Give memory back: nothing looks at the scores any more."""
+        self.view = self.sizes = self.view[:0]
+        self.scores.close()
+        self.clusters.close()
+
     def sound(self) -> bool:
         """Whether all that is held is known."""
         return self.clean >= self.scores.held
@@ -291,6 +297,7 @@ class ShockSums:
         self.ends = apart.merged(self.ends, apart.ends_of(level, spread, slope, lane.length, lane.first_path))
         lengths, paths = np.unique(lane.length[some], return_counts=True)
         self.chains.update(dict(zip(lengths.tolist(), paths.tolist(), strict=True)))
+        lane.close()
 
     def merge(self, other: ShockSums) -> None:
         """Add the sums of other paths."""

@@ -24,6 +24,7 @@ from procgen.theory.lumps import nearest
 FEW = 25.0  # variance of a number of events, at least, that is judged
 NEAR = 1e-12  # of the size of values: what is as near to an atom is it
 _SHARES = (0.02, 0.98)  # chances of a value between which its share is worth a check
+_BESIDE, _ROUNDED = 1e-6, 2.0**-50  # of the spread and the size of a law: how far from an atom rounding carries a value
 _FEW_ATOMS = 4  # more values with a chance of their own are judged by their law alone
 
 
@@ -96,8 +97,9 @@ def lumps(series: str, probe: str, law: Any, x: NDArray, seed: int, grain: float
 def _at_atoms(law: Any, x: NDArray) -> NDArray:
     """Values with those that are an atom but for rounding put on it."""
     atom = nearest(law.atoms, x)
-    size = float(law.ppf(0.9)) - float(law.ppf(0.1)) + max(map(abs, law.atoms))
-    return np.where(np.abs(x - atom) <= NEAR * size, atom, x)
+    spread, size = float(law.ppf(0.9)) - float(law.ppf(0.1)), max(map(abs, law.atoms))
+    near = min(NEAR * (spread + size), _BESIDE * spread + _ROUNDED * size)  # of large atoms a little share is much
+    return np.where(np.abs(x - atom) <= near, atom, x)
 
 
 class EventSums:

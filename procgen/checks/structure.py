@@ -23,6 +23,7 @@ _SAMPLE = 61  # every so manieth step's bits are looked at for a detour through 
 _SPACING = {"float32": 2.0**-24 + 4e-16}  # how far, of its size, a stored decimal number may lie from itself
 _UNSEEN = (0, 0, 0, 0)  # values that fit float32, whole ones, all, those that fit float16
 _MOST = 0.9  # share of values that must be rounded
+_CELLS = 100  # of double precision, over which values spread that are not of some other type by chance
 _CERTAIN = 1e-12  # expected number of equal pairs below which one equal pair is no chance
 _WHOLE = 2.0**40  # size beyond which a number may have no digits after the point without being rounded
 ZEROS = "values that are 0"
@@ -43,6 +44,7 @@ class Precision:
     repeats: copies.Repeats | None = None  # what chance may repeat of it, where that is known to be little
     possible: support.Possible = field(default_factory=support.Possible)  # what its values may be
     smooth: bool = True  # whether by its terms no value of it lies on a grid, so that one that does tells of rounding
+    cell: float = 0.0  # how far apart values are in double precision itself, where that shows
 
 
 @dataclass
@@ -253,8 +255,11 @@ class Structure:
                 f"declared, the first at path {path}, step {step}"
             )
         fits, whole, seen, half = self.narrow.get(what.name, _UNSEEN)
-        told, grid = what.smooth and what.type == "float64" and seen >= 32, self._grid(what)
-        narrow = told and max(fits, whole) > _MOST * seen
+        low, high = self.ends.get(what.name, (math.nan, math.nan))
+        apart = not what.cell or high - low > _CELLS * what.cell  # else double precision itself makes them few
+        told, grid = what.smooth and what.type == "float64" and seen >= 32 and apart, self._grid(what)
+        by_itself = bool(what.cell and self.grids.get(what.name)) and grid is None  # the grid of double precision
+        narrow = told and max(fits, whole) > _MOST * seen and not by_itself
         if narrow and grid is None:
             type = "float16" if half > _MOST * seen else "float32"
             mend = "" if type == "float16" else "; write `type: float32` if that is meant"
@@ -263,8 +268,7 @@ class Structure:
             fault = _WHOLE_NUMBERS if grid == 1.0 else grids.said(grid)
         if what.type == "float32" and fits < seen:
             fault = "values are finer than float32, which is declared"
-        low, high = self.ends.get(what.name, (math.nan, math.nan))
-        if what.smooth and low == high and seen >= 32:
+        if what.smooth and low == high and seen >= 32 and apart:
             fault = f"all values are {number(low, 6)}"
         return Check.fact(what.name, "precision", "all steps", fault, f"as declared: {declared}")
 
@@ -274,9 +278,8 @@ class Structure:
         if what.decimals is not None or seen < 32 or not what.smooth:
             return None
         found = max(self.grids.get(what.name, {}).items(), key=lambda item: item[1], default=("", 0))
-        if found[1] > _MOST * seen:
-            return float(found[0])
-        return 1.0 if whole > _MOST * seen else None
+        grid = float(found[0]) if found[1] > _MOST * seen else 1.0 if whole > _MOST * seen else 0.0
+        return grid if grid > 1.5 * what.cell else None
 
     def _makes_repeats(self, what: Precision, grid: float) -> bool:
         """Whether values repeat as those of the declared precision do not, and those on a grid do."""

@@ -8,7 +8,7 @@ are imported when they are first used.
 - Engines: `engines` (this process and `worker` processes, `forked` where that is safe; `own` says whose process it is)
   and `cluster` (Dask).
 - Files: `places` and `store` (OUT, whole or not at all), `layouts`, `forms` (rows of a file), `files` and `parquet`;
-  read again with `reading`, `watched` (behind a URL) and `again` (columns that repeat).
+  read again with `reading`, `plain` (plain numbers), `again` (columns that repeat) and `watched` (behind a URL).
 - What is said of it: `manifest` and its `seal`, `revealed` (drawn parameters), `errors`.
 - Reading: `ensemble`, its `shapes`; for other tools `export`, `choice`, `targets`, `clock`.
 - Comparing: `check` (are these the values that were drawn), `expected`, `beside` (two of them).

@@ -6,7 +6,7 @@ was read and compared, they need not be unpacked again, which takes as long as r
 
 from __future__ import annotations
 
-from collections.abc import Collection
+from collections.abc import Collection, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -19,10 +19,13 @@ LARGEST = 1 << 20  # bytes of a chunk that are compared; what repeats is packed 
 
 
 class Again:
-    """The bytes of some columns of a file of this machine that were found right; of others nothing is known."""
+    """The bytes of some columns of a file of this machine that were found right; of others nothing is known.
 
-    def __init__(self, path: object, found: pq.FileMetaData, names: Collection[str]):
-        self._path, self._found, self._names = path, found, names
+    packed: how columns are packed, by row group.
+    """
+
+    def __init__(self, path: object, found: pq.FileMetaData, names: Collection[str], packed: Sequence[object]):
+        self._path, self._found, self._names, self._packed = path, found, names, packed
         self._right: dict[str, tuple[Any, ...]] = {}
         self._here: dict[str, tuple[Any, ...]] = {}
 

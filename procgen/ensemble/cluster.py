@@ -23,7 +23,7 @@ from dataclasses import dataclass, field
 from typing import Any
 
 from procgen.chance.streams import STREAM_VERSION
-from procgen.ensemble.engines import FEWER, Engine, Here, Work, function
+from procgen.ensemble.engines import Work, as_json, function
 from procgen.ensemble.errors import EnsembleError
 
 LOCAL = "local"
@@ -35,18 +35,6 @@ SLOW = 3.0  # times the median that the last tasks may take before they are begu
 REPORT = 2.0  # seconds between two reports of rows from one task: a thousand workers then send 500 a second
 TURN = 0.5  # seconds after which the progress is shown again
 MUST_AGREE = ("procgen", "numpy", "pyarrow", "pandas", "scipy")
-
-
-@contextlib.contextmanager
-def opened(
-    scheduler: str | None, workers: int | None, inherit: int | None = None, advice: str = FEWER
-) -> Iterator[Engine]:
-    """The engine that was asked for: a cluster, or this machine when there is no scheduler."""
-    if scheduler is None:
-        yield Here(workers or 1, inherit, advice)
-        return
-    with joined(scheduler, workers) as cluster:
-        yield cluster
 
 
 @contextlib.contextmanager
@@ -339,4 +327,4 @@ def perform(text: str) -> str:
         except MemoryError:
             message = "a worker ran out of memory; give it more, then go on with --resume (resume=True)"
             return json.dumps({"error": message})
-    return json.dumps({"records": records, "rows": rows})
+    return as_json({"records": records, "rows": rows})

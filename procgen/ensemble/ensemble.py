@@ -17,6 +17,7 @@ from procgen.ensemble.forms import form
 from procgen.ensemble.layouts import Layout
 from procgen.ensemble.manifest import Manifest, bytes_text
 from procgen.ensemble.places import Place
+from procgen.ensemble.plain import Room, new
 from procgen.ensemble.plan import GROUP_ROWS, Block, cut
 from procgen.ensemble.seal import contradictions, refuse_changed, refuse_version
 from procgen.ensemble.shapes import Shapes
@@ -272,7 +273,9 @@ class OnDisk(Ensemble):
         end_path: int | None = None,
         names: Sequence[str] | None = None,
         steps: range | None = None,
+        room: Room = new,
     ) -> Blocks:
+        """See `Ensemble.stored`; `room` as of `parquet.read`."""
         first, end = self._range(first_path, end_path)
         stamps, layout = self.stamps, self.manifest.layout
         steps = range(self.whole.end_step) if steps is None else steps
@@ -280,7 +283,7 @@ class OnDisk(Ensemble):
             inside = part.block.end_path > first and part.block.first_path < end
             if inside and part.block.end_step > steps.start and part.block.first_step < steps.stop:
                 yield from parquet.read(
-                    self.path, part.file, part.block, layout, self.columns, stamps, first, end, names
+                    self.path, part.file, part.block, layout, self.columns, stamps, first, end, names, room
                 )
 
 

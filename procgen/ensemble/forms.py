@@ -151,10 +151,14 @@ class Form:
     def _expect_index(self, table: pa.Table, block: Block, where: object) -> None:
         for role, name in self.names.items():
             if role != "id" and name in table.column_names:  # what was not read is known to be right
-                paths = np.arange(block.first_path, block.end_path)[:, None]
-                wanted = paths if role == "path" else self._at(role, block)
                 found = numbers(table.column(name), f"column {name}", where, block)
-                expect(where, name, found.reshape(block.paths, block.steps), wanted, block)
+                expect(where, name, found.reshape(block.paths, block.steps), self.index_at(name, block), block)
+
+    def index_at(self, name: str, block: Block) -> np.ndarray:
+        """What an index column of numbers must hold in a rectangle: (paths, 1) or (steps,)."""
+        if name == self.names.get("path"):
+            return np.arange(block.first_path, block.end_path)[:, None]
+        return self._at("step" if name == self.names.get("step") else "time", block)
 
 
 class Long(Form):

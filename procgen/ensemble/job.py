@@ -11,7 +11,6 @@ from typing import Any
 from procgen.chance import kernel
 from procgen.chance.streams import STREAM_VERSION
 from procgen.ensemble import engines, manifest, revealed
-from procgen.ensemble.cluster import opened
 from procgen.ensemble.columns import TYPES, as_kept, store
 from procgen.ensemble.draw import Drawer, Tick, empty, repays
 from procgen.ensemble.engines import Engine, Progress, Work, default_workers
@@ -235,7 +234,7 @@ class Job:
             # another render may have finished while this one waited for the lock
             if overwrite or (found := self._complete(resume, progress)) is None:
                 advice = f"{engines.FEWER}, then go on with --resume (resume=True)"
-                with opened(scheduler, workers, descriptor, advice) as engine:
+                with engines.opened(scheduler, workers, descriptor, advice) as engine:
                     found = self._draw(engine, resume, overwrite, progress)
         return OnDisk(self.folder.path, found, self.spec)
 

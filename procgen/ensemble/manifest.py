@@ -215,15 +215,13 @@ def roots(records: Iterable[Mapping[str, Any]], whole: Block, kind: str, names: 
 
 def versions() -> dict[str, str]:
     """What made an ensemble: for the reader of a manifest; no value depends on it where `portable` is true."""
-    from importlib import metadata
+    import numpy
+    import pyarrow
+
+    import procgen
 
     found = {"python": platform.python_version(), "machine": platform.machine(), "tzdata": tz_version()}
-    for name in ("procgen", "numpy", "pyarrow"):
-        try:
-            found[name] = metadata.version(name)
-        except metadata.PackageNotFoundError:
-            found[name] = "unknown"
-    return found
+    return found | {package.__name__: package.__version__ for package in (procgen, numpy, pyarrow)}
 
 
 def tz_version() -> str:

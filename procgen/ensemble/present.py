@@ -6,18 +6,21 @@ import contextlib
 from collections.abc import Container, Iterator, Mapping, Sequence
 from dataclasses import asdict
 from itertools import groupby
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from procgen.ensemble import files, parquet, revealed
-from procgen.ensemble.check import Reader, Tick
 from procgen.ensemble.columns import Column
+from procgen.ensemble.engines import Progress
 from procgen.ensemble.errors import Damaged, EnsembleError, Refused
 from procgen.ensemble.layouts import Layout
-from procgen.ensemble.manifest import Manifest, covers
+from procgen.ensemble.manifest import Manifest, PartRecord, covers
 from procgen.ensemble.plan import Block, Chain
 from procgen.ensemble.seal import refuse_changed
 from procgen.ensemble.source import FACTORY
 from procgen.ensemble.store import MANIFEST, PLAN, Folder
+
+if TYPE_CHECKING:
+    from procgen.ensemble.check import Damage
 
 
 class Present:
@@ -35,7 +38,7 @@ class Present:
         self.columns, self.layout = columns, Layout.of(identity)
         self.damaged: set[str] = set()  # names of parts that `complete` found to be so
 
-    def complete(self, resume: bool, progress: Tick | None = None) -> Manifest | None:
+    def complete(self, resume: bool, progress: Progress | None = None) -> Manifest | None:
         """The manifest when all is there, None when there is something to draw.
 
         With `resume` the values of all parts are held against their digests; else those of parts whose size is
@@ -51,12 +54,17 @@ class Present:
             self._refuse_other(found.identity)
         sizes = {part: self.folder.sizes([*found.layout.files(part.file, found.columns)]) for part in found.parts}
         suspects = [part for part, size in sizes.items() if resume or size != part.bytes]
-        damages = Reader(self.folder.path, found, self.factory).examine(progress, suspects)[0] if suspects else []
+        damages = self._damages(found, suspects, progress) if suspects else []
         if damages and not resume:
             mend = "" if "resume=True" in damages[0].sentence else "; draw it again with --resume (resume=True)"
             raise EnsembleError(f"{self.folder.path / damages[0].file}: {damages[0].sentence}{mend}")
         self.damaged = {damage.file for damage in damages}
         return None if damages or found.changed else found
+
+    def _damages(self, found: Manifest, suspects: list[PartRecord], progress: Progress | None) -> list[Damage]:
+        from procgen.ensemble.check import Reader
+
+        return Reader(self.folder.path, found, self.factory).examine(progress, suspects)[0]
 
     def refuse(self, resume: bool) -> None:
         """EnsembleError when another ensemble is there, or an unfinished one without `resume`."""

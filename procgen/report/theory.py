@@ -85,6 +85,8 @@ def _series(theory: SeriesTheory, facts: dict[str, Any], unit: str | None, lags:
     if "past" in facts:
         lines += _wrapped(_past(facts["past"]))
     lines += _wrapped(facts.get("unfelt", ()))
+    if "rounding" in facts:
+        lines += _wrapped([facts["rounding"]["text"]])
     if "missing" in facts:
         share, gap = facts["missing"]["share"], facts["missing"]["gap"]
         text = f"{share:.4g} of its values are missing, in gaps of {gap:.4g} steps on average, whatever they are"

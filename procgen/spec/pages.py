@@ -9,7 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Collection, Iterator, Sequence
 from dataclasses import dataclass
-from io import BytesIO
+from io import SEEK_END, BytesIO
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, BinaryIO
 
@@ -159,11 +159,17 @@ def _refuse(path: Any, chunk: Chunk, size: int, values: int, many: bool) -> None
 
 def _pages(path: Any, file: BinaryIO, begin: int, length: int) -> Iterator[tuple[int, int]]:
     """(bytes when unpacked, values) of each page of a column chunk; of dictionaries no values."""
+    for _, header in headers(path, file, begin, length):
+        yield header.get(2, -1), 0 if header.get(1, -1) == 2 else header.get(501, header.get(801, 0))
+
+
+def headers(path: Any, file: BinaryIO, begin: int, length: int) -> Iterator[tuple[int, dict[int, int]]]:
+    """Where the content of each page of a column chunk begins, and what its header says: see `_struct`."""
     end, last = begin + length, (b"", dict[int, int]())
     while 0 <= begin < end:
         last = text, header = _header(path, file, begin, *last)
-        packed, kind = header.get(3, -1), header.get(1, -1)
-        yield header.get(2, -1), 0 if kind == 2 else header.get(501, header.get(801, 0))
+        yield begin + len(text), header
+        packed = header.get(3, -1)
         if packed < 0:
             return
         begin += len(text) + packed
@@ -227,3 +233,51 @@ def _varint(data: bytes, at: int) -> tuple[int, int]:
         if byte < 128:
             return value, at + k + 1
     raise ValueError("longer than a whole number")
+
+
+def codecs(path: Path) -> list[list[int]]:
+    """How each column is packed, by row group, as the format numbers it; of a footer that cannot be read none.
+
+    PyArrow, asked for one that it does not know, ends the process (26.0: an exception that it does not catch).
+    """
+    try:
+        with path.open("rb") as file:
+            file.seek(-8, SEEK_END)
+            size = int.from_bytes(file.read(4), "little")
+            file.seek(-8 - size, SEEK_END)
+            footer, _ = _value(file.read(size), 0, 12, 0)
+        return [[column[3][4] for column in group[1]] for group in footer[4]]
+    except (OSError, LookupError, ValueError, TypeError):
+        return []
+
+
+def _value(data: bytes, at: int, kind: int, depth: int) -> tuple[Any, int]:
+    """A value of a Thrift structure and where it ends: whole numbers, lists, and structures by number of field."""
+    if kind in _VARINTS:
+        value, at = _varint(data, at)
+        return (value >> 1) ^ -(value & 1), at
+    if kind in _FIXED or kind == 8:
+        size, at = (_FIXED[kind], at) if kind in _FIXED else _varint(data, at)
+        return None, at + size
+    if kind in (9, 10) and depth < 2 * _DEEPEST:
+        count, inside, at = data[at] >> 4, data[at] & 15, at + 1
+        if count == 15:
+            count, at = _varint(data, at)
+        values: list[Any] = [None] * count if count <= len(data) else []
+        for k in range(count):
+            values[k], at = (None, at + 1) if inside in (1, 2) else _value(data, at, inside, depth + 1)
+        return values, at
+    if kind != 12 or depth >= 2 * _DEEPEST:
+        raise ValueError("of another kind")
+    fields: dict[int, Any] = {}
+    number = 0
+    while head := data[at]:
+        at += 1
+        if head >> 4:
+            number += head >> 4
+        else:
+            number, at = _varint(data, at)
+            number = (number >> 1) ^ -(number & 1)
+        if head & 15 not in (1, 2):  # true, false
+            fields[number], at = _value(data, at, head & 15, depth + 1)
+    return fields, at + 1

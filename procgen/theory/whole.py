@@ -12,6 +12,7 @@ import numpy as np
 
 from procgen.spec.words import did_you_mean
 from procgen.theory.axis import Axis
+from procgen.theory.doubles import rounding_of
 from procgen.theory.expression import Expression, opaque
 from procgen.theory.series import FREQUENCIES, HORIZONS, CrossTheory, SeriesTheory, plain
 from procgen.theory.sources import GARCH, Source
@@ -113,6 +114,7 @@ class Theory(Mapping[str, SeriesTheory]):
             told.update(self._missing(name))
             told.update(self._left(name))
             told.update(self._unfelt(name))
+            told.update(self._rounded(name))
         cross = [entry for a, b in combinations(self.series, 2) if (entry := self._cross_entry(a, b, at))]
         return {"series": series, "cross": cross, "correlation": [pair.as_dict() for pair in self.correlated]}
 
@@ -137,6 +139,11 @@ class Theory(Mapping[str, SeriesTheory]):
             for text in node.term.unfelt(steps * node.pace)
         ]
         return {"unfelt": found} if found else {}
+
+    def _rounded(self, name: str) -> dict[str, Any]:
+        """What double precision does to the values of a series; nothing where it does not show."""
+        found = None if self.graph is None else rounding_of(self, name, self.graph.spec.time.steps)
+        return {} if found is None else {"rounding": {"cell": found.cell, "share": found.share, "text": str(found)}}
 
     def _left(self, name: str) -> dict[str, Any]:
         """The recorded past that a series leaves from, and what could not be conditioned on it; nothing without one."""

@@ -37,7 +37,8 @@ from tests.chance.golden import PARAMETERS
 WHITE = "white_noise: {sd: 1}"
 HEAD = "procgen: 1\nseed: 1\npaths: {}\ntime: {{start: 2027-01-04, every: 1h, steps: {}}}\n"
 ALLOWED = 3.0  # times white noise
-BY_PATH = {  # examples with numbers drawn by path
+MORE = {  # by another method, and with numbers drawn by path
+    "arfima, exact": "arfima: {d: 0.3, phi: 0.4, sd: 1, method: exact}",
     "garch, alpha by path": "garch: {sd: 6.3, alpha: {draw: {uniform: [0.05, 0.15]}, over: path}, beta: 0.8}",
     "ar, phi by path": "ar: {phi: {draw: {uniform: [0.3, 0.9]}, over: path}, sd: 1}",
 }
@@ -79,7 +80,7 @@ def arguments() -> argparse.Namespace:
 def terms() -> Iterator[tuple[str, str]]:
     """Name and text of every case: a whole example, or the term alone."""
     yield from ((kind, example_spec(kind)) for kind in catalogue())
-    yield from BY_PATH.items()
+    yield from MORE.items()
 
 
 def laws() -> Iterator[tuple[str, str]]:

@@ -39,9 +39,9 @@ def powerful(findings_at_departure, level):
 def test_normal_mean():
     rng = np.random.default_rng(1)
     means = rng.standard_normal(REPEATS) * 3 / math.sqrt(7) + 2
-    calibrated([judge.normal_mean(m, 2.0, 3.0, 7).log_p for m in means])
-    off = judge.normal_mean(2.0, 2.0, 3.0, 7).detect(1e-5)
-    powerful([judge.normal_mean(m + off, 2.0, 3.0, 7) for m in means[:FEW]], 1e-5)
+    calibrated([judge.normal_mean(m - 2.0, 2.0, 3.0, 7).log_p for m in means])
+    off = judge.normal_mean(0.0, 2.0, 3.0, 7).detect(1e-5)
+    powerful([judge.normal_mean(m + off - 2.0, 2.0, 3.0, 7) for m in means[:FEW]], 1e-5)
 
 
 @pytest.mark.parametrize("dof", [1, 29, 2000])
