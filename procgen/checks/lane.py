@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 
 from procgen.chance import kernel
 from procgen.checks import extremes, farthest, missing
-from procgen.checks.blocks import BLOCK, keep_memory
+from procgen.checks.blocks import BLOCK, WIDE, keep_memory
 from procgen.checks.gather import Gather, Plan
 from procgen.checks.pairs import Pairs
 from procgen.checks.pools import PoolLane
@@ -28,6 +28,7 @@ from procgen.checks.tree import Tree, ranges
 from procgen.ensemble.plan import Block
 
 TILE = 1 << 17  # values of one series in a tile: with fewer, calls cost more than what passes through the caches
+STRIP = 64  # paths that are turned together
 COMPILING_REPAYS = 40_000_000  # values of one process, 15 to 25 ns each: to compile, which pays next time
 LOADING_REPAYS = 4_000_000  # the same where there is machine code, which is loaded in 0.06 s
 
@@ -47,6 +48,17 @@ def are_kept() -> bool:
     tile, bits, places = np.empty((0, 0)), np.empty(0, dtype=np.uint64), np.empty(0, dtype=np.int64)
     many, one = (kernel.machine(module, "looked", __package__) for module in ("fused", "fused_few"))
     return many.is_kept(tile, bits, bits, places, places, places) or one.is_kept(tile[0:0].ravel(), 0, bits, places)
+
+
+def get_ready(plan: Plan, compile: bool) -> None:
+    """Load what every tile needs, such as machine code and tables of laws: sums over zeros are made and thrown away."""
+    with kernel.compiling(compile and kernel.available()):
+        sums, tile = Gather(plan), np.zeros((BLOCK, WIDE))
+        sums.structure.absorb(0, tile, 0, 0, np.zeros(WIDE, np.uint64))
+        for watch in sums.structure.watches(0, WIDE).values():
+            watch.absorb(tile)
+        for shocks in sums.shocks.values():
+            shocks.absorb(tile, 0, shocks.lane(WIDE))
 
 
 class Lane:
@@ -176,7 +188,9 @@ def _tile(rest: NDArray | None, values: NDArray, at: int, count: int) -> NDArray
     old = max(-at, 0)
     if old and rest is not None:
         tile[: min(old, count)] = rest[len(rest) - old :][:count]
-    tile[old:] = values[:, max(at, 0) : at + count].T
+    new = values[:, max(at, 0) : at + count]
+    for first in range(0, len(new), STRIP):  # so many rows at once stay in the nearest cache
+        tile[old:, first : first + STRIP] = new[first : first + STRIP].T
     return tile
 
 

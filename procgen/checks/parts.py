@@ -18,7 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.checks.gather import Gather, Plan
-from procgen.checks.lane import Pass, repays
+from procgen.checks.lane import Pass, get_ready, repays
 from procgen.checks.rectangles import Blocks, Values, first_values, grouped, named
 from procgen.ensemble import digest
 from procgen.ensemble.ensemble import OnDisk, open_ensemble
@@ -57,20 +57,21 @@ def gather_chain(task: Mapping[str, Any], tick: Tick) -> list[dict[str, Any]]:
     return [{"sums": sums, "nodes": chain.nodes, "faults": chain.faults}]
 
 
-def unpacked(plan: Plan, facts: Mapping[str, Any], text: str) -> Gather:
-    """Sums from a record."""
-    data, at, arrays = base64.b64decode(text), 0, {}
+def unpacked(plan: Plan, facts: Mapping[str, Any], data: bytes | str) -> Gather:
+    """Sums from a record of this process, or from one of another, where bytes are text."""
+    data = base64.b64decode(data) if isinstance(data, str) else data
+    at, arrays = 0, {}
     for name, kind, shape in facts["arrays"]:
         arrays[name] = np.frombuffer(data, kind, math.prod(shape), at).reshape(shape)
         at += arrays[name].nbytes
     return Gather(plan).restore(facts, arrays)
 
 
-def _packed(sums: Gather) -> tuple[dict[str, Any], str]:
+def _packed(sums: Gather) -> tuple[dict[str, Any], bytes]:
     """Facts, among them names, kinds and shapes of all arrays, and the arrays one behind the other."""
     facts, arrays = sums.state()
     facts["arrays"] = [[name, values.dtype.str, list(values.shape)] for name, values in arrays.items()]
-    return facts, base64.b64encode(b"".join(values.tobytes() for values in arrays.values())).decode()
+    return facts, b"".join([np.ascontiguousarray(values).data for values in arrays.values()])
 
 
 _CONTEXTS: dict[str, tuple[OnDisk, Plan]] = {}
@@ -80,6 +81,11 @@ _making = threading.Lock()
 def plan_for(task: Mapping[str, Any]) -> Plan:
     """The plan of a task; the last one is kept, and each process derives it for itself."""
     return _context(task["shared"])[1]
+
+
+def prepared(task: Mapping[str, Any]) -> None:
+    """Make the plan and load what tasks need, so that workers forked from this process have both."""
+    get_ready(plan_for(task), task["shared"]["compile"])
 
 
 def _context(shared: Mapping[str, Any]) -> tuple[OnDisk, Plan]:

@@ -11,7 +11,7 @@ from procgen.checks import sizes
 from procgen.checks.foreign import TableError
 from procgen.checks.gather import Gather
 from procgen.checks.lane import in_one_process
-from procgen.checks.parts import WORK, is_whole, plan_for, tasks, unpacked
+from procgen.checks.parts import WORK, is_whole, plan_for, prepared, tasks, unpacked
 from procgen.checks.rectangles import Blocks, grouped, named
 from procgen.checks.tree import Tree
 from procgen.checks.verdict import Check
@@ -155,7 +155,7 @@ class EnsembleOrigin:
             todo = tasks(self.ensemble, self.spec, self.columns, self.same_draws, engine.size)
             if isinstance(self.ensemble.path, Path):
                 engine.check_sees(str(self.ensemble.path.absolute()))
-            engine.run(Work(todo, WORK, keep, progress, 0, self.rows, lambda: plan_for(todo[0])))
+            engine.run(Work(todo, WORK, keep, progress, 0, self.rows, lambda: prepared(todo[0])))
         self.faults.sort(key=lambda check: check.probe)
         self._compare_digests(nodes)
         return tree.total(Gather(plan_for(todo[0])))

@@ -3,6 +3,8 @@
 Values are written plain: nothing compresses random digits, and dictionaries and statistics cost more than
 all the rest. The index columns repeat, so zstd makes them vanish, and they alone carry statistics, which let
 readers skip. Measured per row of layout long: values 5 ns, path 2, step 3, time 3; delta encoding 4.5, 5, 5.5.
+zstd's quick levels do not see again what is 30,000 rows away: steps of such paths take them 23 ns and 1.5 bytes, and
+times are not made smaller at all. Those of long paths are written as differences (delta encoding): 5 ns, 0.04 bytes.
 """
 
 from __future__ import annotations
@@ -33,6 +35,7 @@ if TYPE_CHECKING:
     import pyarrow as pa
     import pyarrow.parquet as pq
 
+LONG = 10_000  # steps of a path from which on they are written as differences
 FAST = -5  # zstd's quick levels are as small on columns that repeat
 IDENTITY = b"procgen"  # metadata: which spec, seed, paths and steps
 NODES = b"procgen.nodes"  # metadata: the digest nodes of the part
@@ -51,12 +54,15 @@ class PartWriter:
         self.form = rows
         self.nodes: dict[str, Any] = {}
         columns = [f"{field.name}.list.element" if _is_list(field) else field.name for field in rows.schema]
+        differences = rows.by_step if rows.whole.steps >= LONG else []
+        packed = [name for name in rows.keys if name not in differences]
         self._sink = pa.OSFile(str(path), "wb")
         self._file = pq.ParquetWriter(
             self._sink,
             rows.schema.with_metadata({IDENTITY: json.dumps(identity)}),
-            compression=dict.fromkeys(columns, "none") | dict.fromkeys(rows.keys, "zstd"),
-            compression_level=dict.fromkeys(rows.keys, FAST),
+            compression=dict.fromkeys(columns, "none") | dict.fromkeys(packed, "zstd"),
+            compression_level=dict.fromkeys(packed, FAST),
+            column_encoding=dict.fromkeys(differences, "DELTA_BINARY_PACKED"),
             use_dictionary=[name for role, name in rows.names.items() if role == "id"],
             write_statistics=rows.keys,
             write_batch_size=1 << 17,

@@ -77,7 +77,8 @@ class Expression:
         if not by:
             return self
         terms = [(t, c * k) for term, c in self.terms.items() for t, k in term.lag(by)]
-        return Expression(self.space, self.mean_path.lag(by), self.linear.lag(by), _collect(terms), lumpy=self.lumpy)
+        path, linear = self.mean_path.lag(by), self.linear.lag(by)
+        return Expression(self.space, path, linear, _collect(terms), lumpy=self.lumpy, branches=self._earlier(by))
 
     def difference(self, lag: int = 1, order: int = 1) -> Expression:
         """(1 - B^lag)^order of the series."""
@@ -122,6 +123,11 @@ class Expression:
         if (branches := self.branches) is None:
             return None
         return lambda: [(flag, change(branch)) for flag, branch in branches()]
+
+    def _earlier(self, by: int) -> Branches | None:
+        if (branches := self.branches) is None:
+            return None
+        return lambda: [(flag if flag is None else flag.lag(by), branch.lag(by)) for flag, branch in branches()]
 
     def hidden(self, name: str) -> Expression:
         """A hidden output of the term, such as the variance of a garch."""

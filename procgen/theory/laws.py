@@ -34,11 +34,11 @@ def jointly_gaussian(x: Expression, y: Expression) -> bool:
 def marginal(x: Expression, step: int) -> Any:
     """The law of x at a step, with pdf, cdf, sf, ppf, mean and var."""
     at = np.array([step], np.int64)
-    from scipy import stats
-
     if x.law is not None:
         return x.law(step)
     if is_gaussian(x):
+        from scipy import stats  # only here: of many series the law is not known, and it takes long to import
+
         variance = float(x.covariance(x, at, at)[0])
         if variance <= 0.0:
             raise Unknown("the value at that step is known, not random")

@@ -52,7 +52,13 @@ class Process:
         raise Unknown(f"the covariance of {self.name} with what it depends on is not known in closed form")
 
     def with_process(self, own: Source, other: Source, t: Steps, s: Steps) -> np.ndarray:
-        """Cov(x(t), y(s)) for another process y that it depends on."""
+        """Cov(x(t), y(s)) for another process y; where one is made of the other, that with an expression."""
+        for x in self.ingredients:
+            if other in x.sources:
+                return self.with_expression(alone(x.space, other), t, s)
+        for x in other.detail.ingredients:
+            if own in x.sources:
+                return other.detail.with_expression(alone(x.space, own), s, t)
         raise Unknown(f"the covariance of {self.name} and {other.detail.name} is not known in closed form")
 
     def product(self, factors: list[tuple[Linear, int]], t: Steps, s: Steps) -> tuple[np.ndarray, np.ndarray]:
@@ -350,6 +356,5 @@ def alone(space: Space, source: Source) -> Any:
 
 def _expression(space: Space, form: Linear) -> Any:
     from procgen.theory.expression import Expression
-    from procgen.theory.known import constant
-
+    
     return Expression(space, constant(0.0), form)
