@@ -21,7 +21,6 @@ if TYPE_CHECKING:
 
 
 Schema = dict[str, Any]  # a part of a JSON Schema (2020-12)
-LEAST, MOST = 1e-30, 1e30  # sizes of numbers whose fourth powers, summed, a double still holds
 FORMS = ("draw", "from_table", "parameter", "column")  # the mappings that stand in place of a number
 
 
@@ -107,9 +106,6 @@ class Real(Domain):
             number = math.inf
         if not math.isfinite(number):
             return reader.expected(tree, self.describe(), "the number must be finite")
-        if number and not LEAST <= abs(number) <= MOST:
-            size = f"what is not 0 must have a size from {LEAST:g} to {MOST:g}: choose other units"
-            return reader.expected(tree, self.describe(), size)
         return number if self.holds(number) else reader.expected(tree, self.describe())
 
     def schema(self) -> Schema:

@@ -114,6 +114,7 @@ class Term:
     # shocks; "bend": its values do not, yet in a sum with others of the same shocks they may cancel; empty: unknown
     smooth: ClassVar[str] = ""
     blurs: ClassVar[bool] = False  # whether `invert` gives back values of a lattice only up to rounding
+    piles: ClassVar[tuple[float, ...]] = ()  # values with a chance of their own, of a term with ranks
     gaps: ClassVar[bool] = False  # whether some of its values are missing; nothing but a factor may follow then
     portable: ClassVar[bool] = True
     why_not_portable: ClassVar[str] = ""

@@ -31,6 +31,7 @@ class Flag(Term):
     source = "Feller (1968), ch. XV, for the chain of two states"
     example = "flag: {share: 0.2, stay: 5}"
     knows = "mean and covariance: share·(1 − share)·r^|lag|, r = 1 − P(on → off) − P(off → on)"
+    piles = (0.0, 1.0)
     parameters = (
         Parameter("share", "p", Real(above=0, below=1), "share of the time it is on", default=None),
         Parameter(

@@ -74,6 +74,7 @@ class Intermittent(Term):
     example = "intermittent: {share: 0.2, stay: 3, size: 12, sd: 6}"
     knows = "mean, covariance p(1 − p)r^|lag|·m² and variance, kurtosis, covariance of squares"
     outputs = ("occurs",)
+    piles = (0.0,)
     parameters: ClassVar[tuple[Parameter, ...]] = (
         Parameter("share", "p", Real(above=0, below=1), "share of the steps with demand"),
         Parameter(

@@ -24,6 +24,7 @@ class CompoundPoisson(Term):
     example = "compound_poisson: {rate: {value: 3, per: day}, sd: 2}"
     knows = "mean, variance, kurtosis and covariance of squares where the jumps have these; λm with their number"
     outputs = ("jumps",)
+    piles = (0.0,)
     parameters: ClassVar[tuple[Parameter, ...]] = (
         Parameter("rate", "λ", Real(above=0, at_most=1000), "mean number of jumps a step", unit="1/step", per="rate"),
         Parameter("mean", "m", Real(), "mean of a jump", default=0.0, unit="series"),

@@ -12,13 +12,14 @@ from typing import Any
 import numpy as np
 
 from procgen.terms.base import Array, Node, Unknown
-from procgen.terms.combine import Hidden
+from procgen.terms.combine import Exp, Hidden
 from procgen.terms.graph import Graph, Source
 from procgen.terms.hidden_states import hidden_states
 from procgen.terms.operators import Integrate
 from procgen.terms.recover import KnownParts, sources_below
 
 ROOT_12 = 3.4641016151377544
+ROUNDING = 8.0 * np.finfo(float).eps  # of the numbers that values are undone through
 OFF = 1e-6  # how far from a whole number a value may lie that is one
 
 
@@ -53,6 +54,16 @@ def _of_hidden_states(graph: Graph, series: str, whole: bool, grain: float) -> R
         chain.append((node, below))
         node = node.inputs[below]
     return why
+
+
+def _passed(size: Array, node: Node, beside: list[Array], undone: Array) -> Array:
+    """The size of the numbers that rounding is a share of, after one more term is undone."""
+    before = np.ones(1) if isinstance(node.term, Exp) else size  # a logarithm turns shares into distances
+    for rows in (*beside, undone):
+        before = np.fmax(before, np.abs(rows))
+    if isinstance(node.term, Integrate):  # the value before was as large
+        before[1:] = np.fmax(before[1:], before[:-1])
+    return before
 
 
 def _undone(graph: Graph, node: Node) -> int | None:
@@ -118,9 +129,11 @@ class Ranking:
         """Standardised uniforms (steps, paths) of the next steps' values, by uniforms `v`; NaN where not known."""
         at = np.arange(self._step, self._step + len(values))
         known = self._known.rows(len(values)) if self._known else {}
+        size = np.abs(values)
         for k, (node, random) in enumerate(self._steps):
             beside = [None if i == random else known.get(id(part)) for i, part in enumerate(node.inputs)]
             if node is self.node:
+                values = self._on_piles(values, ROUNDING * size)
                 told = values, self._cell(values), beside, self._states[k], at
                 lost = np.isnan(values)
                 self.seen = [(happened, np.where(lost, np.nan, p)) for happened, p in node.term.events(*told)]
@@ -129,10 +142,18 @@ class Ranking:
                 answer = node.term.invert(values, beside, self._states[k], at)
             if isinstance(answer, Unknown):
                 return answer
+            if node is not self.node:
+                size = _passed(size, node, [rows for rows in beside if rows is not None], answer[0])
             values, self._states[k] = answer
         self._step += len(at)
         below, upto = (np.where(lost, np.nan, end) for end in values)
         return ROOT_12 * (below + v * (upto - below) - 0.5)
+
+    def _on_piles(self, values: Array, error: Array) -> Array:
+        """Values that are within what undoing has rounded of one with a chance of its own, on it."""
+        for pile in self.node.term.piles if len(self._steps) > 1 else ():
+            values = np.where(np.abs(values - pile) <= error, pile, values)
+        return values
 
     def _cell(self, values: Array) -> tuple[Array, Array]:
         """What is stored as these values: a cell of the rounding, or the value alone."""

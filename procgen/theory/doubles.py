@@ -12,6 +12,7 @@ from typing import Any
 
 import numpy as np
 
+LEAST, MOST = 1e-30, 1e30  # standard deviations whose fourth powers, and those of their statistics, doubles hold
 SEEN = 1e-6  # cell over the standard deviation of moves up to which nothing shows in any number of values
 ROUGH = 0.02  # the same up to which roundings that add up, or differ by step, leave moments as they are
 COARSE = 0.5  # the same of roundings that do neither
@@ -20,6 +21,7 @@ _FAR = 3.0  # standard deviations
 _LOST = 1e-9  # share of a variance below which a difference of covariances is rounding
 _QUARTERS = 1.3489795003921634  # between the quartiles of a normal law, in standard deviations
 _PASSING = frozenset({"sum", "use", "lag", "difference", "integrate", ""})  # they keep the cells of what they are given
+_KEEPING = frozenset({"integrate", "lag", "difference"})  # their values are made of earlier ones
 _ADDING = frozenset({"sum", "use", "lag", "difference", "exp", ""})  # each value of theirs is rounded by itself
 
 
@@ -65,11 +67,12 @@ def rounding_of(theory: Any, name: str, steps: int) -> Rounding | None:
     if sizes is None:
         return None
     mean, sd = sizes
-    cell, adds_up = _cell(theory, theory.graph.series[name], at, {})
-    moving = sd[sd > 0.0]
-    if not moving.size or cell <= _SURE * float(moving.min()):
+    cells, adds_up = _cell(theory, theory.graph.series[name], at, {})
+    if not np.any(cells > _SURE * np.where(sd > 0.0, sd, np.inf)):
         return None
-    moves = _moves(x, float(moving.min()), steps)
+    all_moves = _moves(x, at, sd)
+    worst = int(np.argmax(cells / all_moves))
+    cell, moves = float(cells[worst]), float(all_moves[worst])
     if cell <= SEEN * moves:
         return None
     lattice = getattr(x.marginal(int(at[-1])), "spacing", 0.0)
@@ -78,6 +81,20 @@ def rounding_of(theory: Any, name: str, steps: int) -> Rounding | None:
     inner = np.maximum(np.abs(mean) - _FAR * sd, 0.0)
     least, level = float(np.spacing(inner.min())), float(np.max(np.abs(mean) + sd))
     return Rounding(cell, least, level, moves, adds_up or x.discrete)
+
+
+def beyond_doubles(x: Any, steps: int) -> str:
+    """Why sums of fourth powers of a series' values are no numbers; empty where they are."""
+    at = _steps_of(steps)
+    law = x.marginal(int(at[-1]))
+    sizes = _sizes(x, at) if law is None else _quartiles(law, at)  # a long tail is no large unit
+    moving = np.zeros(0) if sizes is None else sizes[1][sizes[1] > 0.0]
+    if not moving.size or (LEAST <= moving.min() and np.isfinite(moving.max()) and moving.max() <= MOST):
+        return ""
+    spread = moving.min() if moving.min() < LEAST else moving.max()
+    return f"its standard deviation of {spread:.3g} has powers that no double holds: choose another unit".replace(
+        "e-", "e−"
+    )
 
 
 def _steps_of(steps: int) -> np.ndarray:
@@ -90,43 +107,46 @@ def _sizes(x: Any, at: np.ndarray) -> tuple[np.ndarray, np.ndarray] | None:
     if mean is not None and variance is not None:
         return mean, np.sqrt(variance)
     law = x.marginal(int(at[-1]))
-    if law is None:
-        return None
+    return None if law is None else _quartiles(law, at)
+
+
+def _quartiles(law: Any, at: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     low, middle, high = (np.full(len(at), float(law.ppf(p))) for p in (0.25, 0.5, 0.75))
     return middle, (high - low) / _QUARTERS
 
 
-def _cell(theory: Any, node: Any, at: np.ndarray, known: dict[int, Any]) -> tuple[float, bool]:
-    """The largest distance of neighbouring values on the way to a node, and whether its roundings add up."""
+def _cell(theory: Any, node: Any, at: np.ndarray, known: dict[int, Any]) -> tuple[np.ndarray, bool]:
+    """The largest distance of neighbouring values on the way to a node by step, and whether its roundings add up."""
     if id(node) not in known:
-        known[id(node)] = _cell_of(theory, node, at, known) if hasattr(node, "term") else (0.0, False)
+        known[id(node)] = _cell_of(theory, node, at, known) if hasattr(node, "term") else (np.zeros(len(at)), False)
     return known[id(node)]
 
 
-def _cell_of(theory: Any, node: Any, at: np.ndarray, known: dict[int, Any]) -> tuple[float, bool]:
+def _cell_of(theory: Any, node: Any, at: np.ndarray, known: dict[int, Any]) -> tuple[np.ndarray, bool]:
     from procgen.theory.series import SeriesTheory
 
     written, kind = theory.written.get(id(node)), node.term.kind
     sizes = None if written is None else _sizes(SeriesTheory(node.key, written), at)
-    size = 0.0 if sizes is None else float(np.max(np.abs(sizes[0]) + _FAR * sizes[1]))
-    own = float(np.spacing(size)) if np.isfinite(size) else 0.0
+    size = np.zeros(len(at)) if sizes is None else np.abs(sizes[0]) + _FAR * sizes[1]
+    own = np.where(np.isfinite(size), np.spacing(np.where(np.isfinite(size), size, 0.0)), 0.0)
     factor = size if kind == "exp" else abs(float(getattr(node.term, "factor", 1.0)))
     passing = kind in _PASSING or kind == "exp"
     given = [_cell(theory, part, at, known) for part in node.inputs] if passing else []
-    passed = factor * max((cell for cell, _ in given), default=0.0)
-    adds_up = any(adds for cell, adds in given if factor * cell >= own)
-    if own >= passed and kind not in _ADDING:
+    passed = factor * np.max([np.zeros(len(at)), *(cell for cell, _ in given)], axis=0)
+    adds_up = any(adds for cell, adds in given if np.any(factor * cell >= own))
+    if np.any(own >= passed) and kind not in _ADDING:
         adds_up = written is None or bool(written.sources)
-    return max(own, passed), adds_up
+    cell = np.maximum(own, passed)
+    return (np.maximum.accumulate(cell) if kind in _KEEPING else cell), adds_up
 
 
-def _moves(x: Any, sd: float, steps: int) -> float:
-    """The least standard deviation of values, and of their first and second differences early and later on."""
-    found = [sd * sd]
-    for t in {2, min(50, steps - 1)} if steps > 2 else ():
-        for weights in ((1.0, -1.0), (1.0, -2.0, 1.0)):
-            found += _difference(x.covariance, t, np.array(weights))
-    return float(np.sqrt(min(found)))
+def _moves(x: Any, at: np.ndarray, sd: np.ndarray) -> np.ndarray:
+    """The least standard deviation of values, and of their first and second differences, at each step; inf for none."""
+    found = np.where(sd > 0.0, sd * sd, np.inf)
+    for i, t in enumerate(at):
+        for weights in ((1.0, -1.0), (1.0, -2.0, 1.0)) if t >= 2 else ():
+            found[i] = min([found[i], *_difference(x.covariance, int(t), np.array(weights))])
+    return np.sqrt(found)
 
 
 def _difference(covariance: Callable[..., Any], t: int, weights: np.ndarray) -> list[float]:

@@ -122,3 +122,12 @@ def test_the_cell_is_that_of_ieee_754():
 @pytest.mark.parametrize("body", [(level(100.0), noise(1.0)), (level(1e9), noise(1.0)), (walk(1.0, start=1e8),)])
 def test_nothing_is_said_where_nothing_shows(body):
     assert rounding_of(pg.theory(spec_of(*body)), "x", 60) is None
+
+
+@pytest.mark.parametrize("sd", [1e-60, 1e-40, 1e40, 1e100])
+def test_values_whose_powers_no_double_holds_are_not_judged_and_the_reason_says_so(sd):
+    head = {"procgen": 1, "seed": 3, "paths": 300, "time": {"steps": 100}}
+    spec = head | {"series": {"x": [{"ar": {"phi": 0.7, "sd": sd}}]}}
+    verdict = pg.validate(pg.render(spec))
+    assert verdict.agrees is None
+    assert "choose another unit" in verdict.text()

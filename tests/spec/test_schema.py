@@ -130,7 +130,7 @@ BEYOND = {
     "numbers that go together": r"expected all roots|alpha \+ beta|expected E log|positive definite|on the diagonal|"
     r"symmetric matrix|rows of 2 for 2|expected 2 rows|squares that sum|at most 1e\+13 values|an int64 has no decimals",
     "how a list of names is read": "expected a list of at least two names",
-    "a number that is not finite, or of no size for its squares": "the number must be finite|choose other units",
+    "a number that is not finite": "the number must be finite",
     "a key that means nothing without another": "means nothing without|says its own spread|cannot vary|count only on",
     "the steps of the grid": "needs the length of a step|expected steps that end by",
     "the clock and the calendar": "expected a (time zone|date|year|start)|does not exist in|has an offset that|unknown "
