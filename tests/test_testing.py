@@ -5,6 +5,7 @@ pytest and pytest-xdist are what they are held against: outcomes are read from p
 
 from __future__ import annotations
 
+import os
 import re
 import subprocess
 import sys
@@ -36,6 +37,7 @@ def test_one(dairy):
 def test_two(dairy):
     assert dairy.path.parts[-2].startswith("procgen")
 """
+BARE = os.environ | {"PYTEST_DISABLE_PLUGIN_AUTOLOAD": "1"}  # plugins of this suite take half the time of a start
 
 
 class Project:
@@ -56,8 +58,9 @@ class Project:
 
     def run(self, *options: str, passed: int = 0, errors: int = 0, failed: int = 0) -> str:
         """What pytest prints; it is an error when it counts other outcomes than these."""
-        command = [sys.executable, "-m", "pytest", "-q", *options]
-        done = subprocess.run(command, cwd=self.folder, capture_output=True, text=True, timeout=300)
+        needed = ["-p", "xdist.plugin"] if "-n" in options else []
+        command = [sys.executable, "-m", "pytest", "-q", *needed, *options]
+        done = subprocess.run(command, cwd=self.folder, capture_output=True, text=True, timeout=300, env=BARE)
         counted = {what: int(n) for n, what in re.findall(r"(\d+) (passed|error|failed)", done.stdout.splitlines()[-1])}
         wanted = {"passed": passed, "error": errors, "failed": failed}
         assert counted == {k: n for k, n in wanted.items() if n}, done.stdout + done.stderr

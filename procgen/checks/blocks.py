@@ -175,7 +175,7 @@ class Window:
         return view
 
     def _make_room(self, count: int) -> None:
-        size = self.reach + max(2 * count, 2 * BLOCK, self.reach)
+        size = self.reach + max(count, 2 * BLOCK, self.reach)
         old, rows = self._rows, self._rows if len(self._rows) >= size else _rows(size, self.paths)
         rows[: self.held] = old[self._end - self.held : self._end].copy()
         if rows is not old:

@@ -44,13 +44,15 @@ def farthest(
 ) -> list[Far]:
     """The KEPT farthest of those known, of earlier steps, and a tile (steps, paths) of scores g, shocks z, values x.
 
-    Of scores of one size the earlier are kept. `worst`: bounds on the sizes of runs of steps, as many in each, where
-    they are known; only scores larger than `least` are wanted.
+    Of scores of one size the earlier are kept. `worst`: the largest sizes of runs of steps, as many in each, where all
+    scores are known; only scores larger than `least` are wanted.
     """
     least = max(least, known[-1][0]) if len(known) == KEPT else least
     with np.errstate(invalid="ignore"):
         if worst is None:
             worst = np.fmax(np.fmax.reduce(g, axis=1), -np.fmin.reduce(g, axis=1))
+        elif len(worst) > KEPT:  # as many rows have one that is as large as the least of the KEPT largest of them
+            least = max(least, float(np.nextafter(np.partition(worst, -KEPT)[-KEPT], 0.0)))
         if not (worst > least).any():
             return list(known)
         rows = np.flatnonzero(np.repeat(worst > least, len(g) // len(worst)))

@@ -85,6 +85,7 @@ class Table:
         if names.clock is not None:
             self._compare_times(frame[names.clock], step)
         self._refuse_window(int(step.min()), int(step.max()))
+        self._refuse_cuts(path, step)
         self.paths, self.steps = len(self.labels), int(step.max()) + 1
         if self.paths * self.steps > 4 * len(frame) + 1_000_000:
             raise TableError(
@@ -246,6 +247,23 @@ class Table:
                 f"a spec states its values from step 0 on, so give {_steps(0, first - 1)} too; where the spec states "
                 f"the same of every step, numbers from 0 will do"
             )
+
+    def _refuse_cuts(self, path: NDArray, step: NDArray) -> None:
+        """Nor does one whose paths are as many steps each, in a row, and begin at steps of their own: a record, cut."""
+        count = np.bincount(path)
+        first = np.full(len(count), np.iinfo(np.int64).max)
+        last = np.zeros(len(count), np.int64)
+        np.minimum.at(first, path, step)
+        np.maximum.at(last, path, step)
+        if len(count) < 2 or len(np.unique(first)) < len(first) or np.any(last - first + 1 != count) or np.ptp(count):
+            return
+        later = int(np.argsort(first)[1])
+        raise TableError(
+            f"{self.where} cannot be judged as it is: expected each path to have steps from 0 on, got "
+            f"{many(len(count), 'path')} of {many(int(count[0]), 'step')} each that begin at steps of their own, such "
+            f"as {self.labels[later]} at step {first[later]}, as windows cut from one long record do; number the steps "
+            f"of each path from 0, or, if they are one path, give them one name"
+        )
 
     def _place(self, path: NDArray, step: NDArray) -> None:
         """Sort rows by path and step; name what is missing or there twice."""

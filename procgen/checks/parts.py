@@ -57,20 +57,21 @@ def gather_chain(task: Mapping[str, Any], tick: Tick) -> list[dict[str, Any]]:
     return [{"sums": sums, "nodes": chain.nodes, "faults": chain.faults}]
 
 
-def unpacked(plan: Plan, facts: Mapping[str, Any], text: str) -> Gather:
-    """Sums from a record."""
-    data, at, arrays = base64.b64decode(text), 0, {}
+def unpacked(plan: Plan, facts: Mapping[str, Any], data: bytes | str) -> Gather:
+    """Sums from a record of this process, or from one of another, where bytes are text."""
+    data = base64.b64decode(data) if isinstance(data, str) else data
+    at, arrays = 0, {}
     for name, kind, shape in facts["arrays"]:
         arrays[name] = np.frombuffer(data, kind, math.prod(shape), at).reshape(shape)
         at += arrays[name].nbytes
     return Gather(plan).restore(facts, arrays)
 
 
-def _packed(sums: Gather) -> tuple[dict[str, Any], str]:
+def _packed(sums: Gather) -> tuple[dict[str, Any], bytes]:
     """Facts, among them names, kinds and shapes of all arrays, and the arrays one behind the other."""
     facts, arrays = sums.state()
     facts["arrays"] = [[name, values.dtype.str, list(values.shape)] for name, values in arrays.items()]
-    return facts, base64.b64encode(b"".join(values.tobytes() for values in arrays.values())).decode()
+    return facts, b"".join([np.ascontiguousarray(values).data for values in arrays.values()])
 
 
 _CONTEXTS: dict[str, tuple[OnDisk, Plan]] = {}

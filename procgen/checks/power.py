@@ -1,7 +1,7 @@
 """Detectable sizes: the smallest departure that a check finds 9 times in 10 at a given level.
 
 `level` is the two-sided level that one check works at (the family's level divided by the number of checks).
-Departures are upward ones (of an evenness, downward), in the unit of the check's estimate.
+Departures are upward ones (of an evenness, and of a share above a half, downward), in the unit of the check's estimate.
 """
 
 from __future__ import annotations
@@ -130,9 +130,10 @@ def gap(level: float, n: int) -> float:
 
 
 def share(level: float, p: float, n: int) -> float:
-    """Detectable departure of a share from p among n independent cases."""
+    """Detectable departure of a share from p, towards a half, among n independent cases."""
+    p = min(p, 1.0 - p)
     error = math.sqrt(p * (1 - p) / n)
-    reach = error * critical(level, (1 - 2 * p) / math.sqrt(n * p * (1 - p)))
+    reach = error * critical(level, (1 - 2 * p) / math.sqrt(n * p * (1 - p))) + 0.5 / n  # whole numbers of cases
     departure = reach
     for _ in range(60):
         other = min(1.0, p + departure)

@@ -24,6 +24,7 @@ from procgen.theory.unknown import Unknown
 
 LAGS = (1, 2)
 SIZE = 1 + len(LAGS)
+_WIDER = 1.1  # times the values, by which it is seen how the spread of cosines grows with theirs
 _ENOUGH = 8.0  # moments with which averages of squares are judged
 _FINE = 0.01  # grain over sd up to which rounding moves no cosine
 
@@ -67,6 +68,30 @@ def stated(plan: Any) -> list[float]:
     return out
 
 
+def spread(plan: Any, times: float = 1.0) -> tuple[float, float]:
+    """Mean and standard deviation of a path's mean cosine, by theory, of values so many times as wide.
+
+    E cos(a) cos(b) is half the sum of E cos(a + b) and E cos(a − b).
+    """
+    x, at = plan.theory.expression, _moving(plan)
+    u, steps = times / np.sqrt(plan.drawn[at]), plan.steps[at].tolist()
+    alike, known = plan.theory.stationarity.strict_deviations, {}
+
+    def of(i: int, j: int) -> tuple[float, float]:
+        key = (0, steps[j] - steps[i]) if alike else (i, j)
+        if key not in known:
+            places = ([steps[i]], [2.0 * u[i]]) if i == j else ([steps[i], steps[j]], [u[i], u[j]])
+            both = characteristic(x, *places).real
+            apart = 1.0 if i == j else characteristic(x, places[0], [u[i], -u[j]]).real
+            known[key] = (0.5 * (both + apart), characteristic(x, [steps[i]], [u[i]]).real)
+        return known[key]
+
+    n = len(at)
+    mean = sum(of(i, i)[1] for i in range(n)) / n
+    square = sum((2.0 - (i == j)) * of(i, j)[0] for i in range(n) for j in range(i, n)) / n**2
+    return mean, math.sqrt(max(square - mean**2, 0.0))
+
+
 def wave_checks(plan: Any, samples: list[Sample]) -> Iterator[Check]:
     """The checks of these, where there are paths enough."""
     probes = many(len(_moving(plan)), "step")
@@ -74,29 +99,26 @@ def wave_checks(plan: Any, samples: list[Sample]) -> Iterator[Check]:
     if samples[0].n < FEW_PATHS:
         return
     try:
-        known = stated(plan)
+        known, spreads = stated(plan), [spread(plan), spread(plan, _WIDER)]
     except Unknown:  # of very many shocks
         return
     for (what, probe, kind), sample, theory in zip(names, samples, known, strict=True):
         if math.isfinite(theory) and sample.n >= FEW_PATHS and sample.sd > 0.0:
             apart = replace(sample, mean=sample.mean - theory)
-            finding = judge.sample_mean(apart, theory)
-            yield Check.of(plan.name, what, probe, kind, _wider(finding, sample.n) if what == COSINES else finding)
+            finding = _cosines(apart, theory, spreads) if what == COSINES else judge.sample_mean(apart, theory)
+            yield Check.of(plan.name, what, probe, kind, finding)
 
 
-def _wider(finding: Finding, n: int) -> Finding:
-    """The same, with the smallest departure to wider values: whose cosines spread more, about as 1 − mean²."""
-    theory, error = finding.theory, finding.standard_error
-    assert theory is not None and error is not None
+def _cosines(sample: Sample, theory: float, spreads: list[tuple[float, float]]) -> Finding:
+    """The mean cosine, whose spread is known, with the smallest departure to wider values: theirs spread more."""
+    (mean, sd), (less, more) = spreads
+    error, grows = sd / math.sqrt(sample.n), max(more / sd - 1.0, 0.0) / max(mean - less, 1e-9)
+    finding = judge.sample_mean(sample, theory, sd)
+    mirrored = judge.sample_mean(replace(sample, mean=-sample.mean, skew=-sample.skew), theory, sd)
 
     def detect(level: float) -> float:
-        x = (finding.detect(level) or math.inf) / error - power.Z_POWER  # of the sum over root of squares
-        if not x * x < n:
-            return math.inf
-        reach, size = error * (x * math.sqrt((n - 1) / (n - x * x)) + power.Z_POWER), 0.0
-        for _ in range(60):
-            size = reach * math.sqrt((1.0 - min(abs(theory - size), 1.0) ** 2) / (1.0 - theory**2))
-        return size if size <= theory else math.inf  # no cosine of what is wide is below 0 by as much
+        size = (mirrored.detect(level) or math.inf) / (1.0 - power.Z_POWER * error * grows)
+        return size if 0.0 < size <= theory else math.inf  # no cosine of what is wide is below 0 by as much
 
     return replace(finding, detect=detect)
 

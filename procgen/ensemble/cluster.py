@@ -23,7 +23,7 @@ from dataclasses import dataclass, field
 from typing import Any
 
 from procgen.chance.streams import STREAM_VERSION
-from procgen.ensemble.engines import Work, function
+from procgen.ensemble.engines import Work, as_json, function
 from procgen.ensemble.errors import EnsembleError
 
 LOCAL = "local"
@@ -327,4 +327,4 @@ def perform(text: str) -> str:
         except MemoryError:
             message = "a worker ran out of memory; give it more, then go on with --resume (resume=True)"
             return json.dumps({"error": message})
-    return json.dumps({"records": records, "rows": rows})
+    return as_json({"records": records, "rows": rows})

@@ -1,8 +1,8 @@
 """Who works on the chains of an ensemble: this process alone, or this process and worker processes beside it.
 
 A task is data for JSON, and the work is a function named as "module:function", which takes a task and a tick and
-returns a list of records, data for JSON too: rendering draws a chain, validation sums one up. Workers are plain child
-processes that read tasks and write records as lines of JSON. So a caller's script needs no
+returns a list of records, data for JSON and bytes: rendering draws a chain, validation sums one up. Workers are plain
+child processes that read tasks and write records as lines of JSON. So a caller's script needs no
 `if __name__ == "__main__"`, nothing is forked under running threads, and no pickle is read. The calling process works
 too: while workers import (0.2 s) it is already at it. A command forks its workers where that is safe (`forked`), before
 any thread is begun.
@@ -10,6 +10,7 @@ any thread is begun.
 
 from __future__ import annotations
 
+import base64
 import contextlib
 import importlib
 import json
@@ -38,6 +39,11 @@ def function(name: str) -> Callable[..., Any]:
     """The function behind "module:function"."""
     module, _, attribute = name.partition(":")
     return getattr(importlib.import_module(module), attribute)
+
+
+def as_json(answer: Mapping[str, Any]) -> str:
+    """An answer that goes to another process; bytes go as text, and stay what they are in this one."""
+    return json.dumps(answer, default=lambda data: base64.b64encode(data).decode())
 
 
 def processors() -> int:

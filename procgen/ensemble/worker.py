@@ -55,9 +55,9 @@ class Worker:
         from procgen.ensemble.errors import EnsembleError, lacks_memory, system_sentence
 
         try:
-            from procgen.ensemble.engines import function
+            from procgen.ensemble.engines import as_json, function
 
-            return json.dumps({"records": function(work)(task, self._tick)})
+            return as_json({"records": function(work)(task, self._tick)})
         except EnsembleError as error:
             return json.dumps({"error": str(error)})
         except Exception as error:

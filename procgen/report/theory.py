@@ -20,6 +20,7 @@ DUST = 1e-13  # of the variance
 NOTHING = 1e-9  # a partial autocorrelation that is shown as 0
 WIDEST = 90  # lags in a correlogram
 WANTED = ("mean", "variance", "autocovariance")  # of others, where autocovariances depend on the lag alone
+PAIRS = 200  # of series that go together, that a text tells of
 
 
 def theory_json(
@@ -43,7 +44,7 @@ def theory_text(
     horizons: Sequence[int] | None = None,
 ) -> str:
     """Equations, verdicts and moments, for a person to read; spectral densities where frequencies are given."""
-    told = _told(spec, theory, at, [0, *some(lags + 1)[1:]], frequencies or (), horizons)
+    told = _told(spec, theory, at, [0, *some(lags + 1)[1:]], frequencies or (), horizons, PAIRS + 1)
     lines = [head(spec), *equations(spec, WIDTH, theory.graph)]
     for name, facts in told["series"].items():
         lines += ["", *_series(theory[name], facts, spec.series[name].unit, lags)]
@@ -51,9 +52,9 @@ def theory_text(
     return "\n".join(lines)
 
 
-def _told(spec, theory, at, lags, frequencies, horizons) -> dict[str, Any]:
+def _told(spec, theory, at, lags, frequencies, horizons, pairs=None) -> dict[str, Any]:
     chosen = FREQUENCIES if frequencies is None else frequencies
-    return theory.as_dict(at or some(spec.time.steps), lags, chosen, horizons or HORIZONS)
+    return theory.as_dict(at or some(spec.time.steps), lags, chosen, horizons or HORIZONS, pairs)
 
 
 def some(count: int) -> list[int]:
@@ -232,14 +233,16 @@ def _table(head: str, columns: Sequence[float], rows: Sequence[tuple[str, list |
 
 def _cross(entries: Iterable[dict[str, Any]]) -> list[str]:
     lines: list[str] = []
-    for entry in entries:
+    listed = list(entries)
+    for entry in listed[:PAIRS]:
         lines += ["", f"{entry['series'][0]} with {entry['series'][1]}"]
         if "reason" in entry:
             lines += _wrapped([f"covariance unknown: {entry['reason']}"])
             continue
         rows = [("covariance", entry["covariance"]), ("correlation", entry["correlation"])]
         lines += _table("step", entry["steps"], rows)
-    return lines
+    more = [f"… and more pairs of series that go together: these are the first {PAIRS}, --json tells of all"]
+    return [*lines, "", *more] if len(listed) > PAIRS else lines
 
 
 def _correlated(entries: Iterable[dict[str, Any]]) -> list[str]:

@@ -10,7 +10,7 @@ raises `unknown`, with its reason.
   `wold`, `vector`, `fractional`, `elapsed` (unequal steps), `left` (a recorded past).
 - Volatility: `volatile` (constructors), `volatility`, `garch`, `powers`, `firstorder`, `perpetuity`, `transient`,
   `logvariance`, `parallel`.
-- Processes that are no filter: `processes`, `stated`, `chains`, `markov`, `bends`, `lattice`, `distributed`,
+- Processes that are no filter: `processes`, `running`, `stated`, `chains`, `markov`, `bends`, `lattice`, `distributed`,
   `bootstrap`.
 - Laws at one step: `laws`, `counted`, `lumps` (values with a chance of their own), `mixtures`, `joint`, `stable`,
   `characteristic`, `averages`.

@@ -17,12 +17,13 @@ import numpy as np
 
 from procgen.theory import known, monomials
 from procgen.theory.known import Known
-from procgen.theory.linear import At, Base, Linear, Sum
+from procgen.theory.linear import At, Base, Linear, Sum, base_of
 from procgen.theory.monomials import Term, in_order
 from procgen.theory.sources import IID, OPAQUE, Source, Space, roots
 from procgen.theory.unknown import Unknown
 
 MOST_TERMS = 512
+LARGEST_LOG = 300.0  # of what an indicator multiplies an exponential by
 _serial = count()
 
 
@@ -103,6 +104,9 @@ class Expression:
 
     def exp(self) -> Expression:
         """The exponential of the series; opaque unless the series is linear."""
+        rest, apart = _without_indicators(self)
+        if apart:
+            return replace(product(self.space, [rest.exp(), *apart]), lumpy=self.lumpy)
         if self.terms:
             return opaque(self.space, (self,), "moments of an exponential of products are not worked out")
         level = self.mean_path.exp()
@@ -165,6 +169,28 @@ def _moved(law: Callable[[int], Any], factor: float, path: Known | None = None) 
         return Affine(law(step), 0.0 if path is None else float(path(np.array([step]))[0]), factor)
 
     return moved
+
+
+def _without_indicators(x: Expression) -> tuple[Expression, list[Expression]]:
+    """Exponentials of flags and states of chains in x, and the rest of it.
+
+    Of indicators I of which at most one is 1, exp(sum of c I) is 1 + the sum of (exp(c) - 1) I.
+    """
+    groups: dict[tuple[int, int], list[tuple[At, float]]] = {}
+    for key, c in x.linear.items():
+        detail = base_of(key).source.detail
+        if isinstance(key, At) and not key.base.phi and getattr(detail, "share", None) and abs(c) < LARGEST_LOG:
+            groups.setdefault((id(detail.apart_from), key.delay), []).append((key, c))
+    path, apart = x.mean_path, []
+    for group in groups.values():
+        level, gains = known.constant(1.0), {}
+        for key, c in group:
+            share, gain = key.base.source.detail.share.lag(key.delay), float(np.expm1(c))
+            path, level, gains[key] = path + share.scaled(-c), level + share.scaled(gain), gain
+        apart.append(Expression(x.space, level, Linear(gains)))
+    taken = {key for group in groups.values() for key, _ in group}
+    linear = Linear({key: c for key, c in x.linear.items() if key not in taken})
+    return Expression(x.space, path, linear, x.terms), apart
 
 
 def product(space: Space, expressions: Sequence[Expression]) -> Expression:

@@ -28,6 +28,7 @@ class Indicator(Process):
     def __init__(self, name: str, driver: Expression, chain: States, state: int, says: tuple[tuple[str, str], ...]):
         super().__init__(name, (driver,), says)
         self.chain, self.state = chain, state
+        self.share, self.apart_from = _chance(chain, name, state), chain
 
     def covariance(self, t, s):
         return self._with(self, t, s)
@@ -84,7 +85,8 @@ def number_of_state(
     if chain.start is not None:
         leaves = f"{name} leaves from {names[owners[chain.start]]}"
         says = ((SETTLES, f"{leaves} and forgets it") if chain.forgets else (VARIES, f"{leaves} and remembers it"),)
-    stages = [make(Indicator(name, driver, chain, k, says), _chance(chain, name, k)) for k in range(len(owners))]
+    indicators = [Indicator(name, driver, chain, k, says) for k in range(len(owners))]
+    stages = [make(each, each.share) for each in indicators]
     states = [reduce(add, [x for x, i in zip(stages, owners, strict=True) if i == k]) for k in range(len(names))]
     total = states[1]
     for k, state in enumerate(states[2:], start=2):

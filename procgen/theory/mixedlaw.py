@@ -41,9 +41,18 @@ class MixedLaw:
         return self._sum("sf", x)
 
     def ppf(self, p: Any) -> NDArray:
-        """Quantiles, by halving between those of the parts."""
+        """Quantiles, by halving between those of the parts; each side by its own area, which has all its digits."""
         p = np.asarray(p, float)
-        return halved(lambda x: np.where(p < 0.5, self.cdf(x) < p, self.sf(x) > 1.0 - p), *self._ends(p))
+        low, high = self._ends(p)
+        found = np.empty(p.shape)
+        below = p < 0.5
+        if below.any():
+            area = p[below]
+            found[below] = halved(lambda x: self.cdf(x) < area, low[below], high[below])
+        if not below.all():
+            rest = 1.0 - p[~below]
+            found[~below] = halved(lambda x: self.sf(x) > rest, low[~below], high[~below])
+        return found[()]
 
     def _ends(self, p: NDArray) -> tuple[NDArray, NDArray]:
         parts = np.array([law.ppf(p) for law in self.laws])

@@ -12,6 +12,7 @@ from typing import Any
 
 import numpy as np
 
+from procgen.theory.known import constant
 from procgen.theory.linear import At, Base, Linear, base_of
 from procgen.theory.sources import Source, Space
 from procgen.theory.unknown import Unknown
@@ -30,6 +31,8 @@ class Process:
     lumpy = False  # whether some of its values have a chance of their own
     gaussian = False  # whether its values at any steps are jointly Gaussian
     filters = False  # whether it is a filter, which asks for covariances of what it filters
+    share: Any = None  # of an indicator, 0 or 1 less its mean: that mean, a known path
+    apart_from: Any = None  # what indicators have in common of which never two are 1 at a step
 
     def __init__(self, name: str, ingredients: tuple[Any, ...], says: tuple[tuple[str, str], ...] = ()):
         self.name, self.ingredients, self.says = name, ingredients, says
@@ -52,7 +55,13 @@ class Process:
         raise Unknown(f"the covariance of {self.name} with what it depends on is not known in closed form")
 
     def with_process(self, own: Source, other: Source, t: Steps, s: Steps) -> np.ndarray:
-        """Cov(x(t), y(s)) for another process y that it depends on."""
+        """Cov(x(t), y(s)) for another process y; where one is made of the other, that with an expression."""
+        for x in self.ingredients:
+            if other in x.sources:
+                return self.with_expression(alone(x.space, other), t, s)
+        for x in other.detail.ingredients:
+            if own in x.sources:
+                return other.detail.with_expression(alone(x.space, own), s, t)
         raise Unknown(f"the covariance of {self.name} and {other.detail.name} is not known in closed form")
 
     def product(self, factors: list[tuple[Linear, int]], t: Steps, s: Steps) -> tuple[np.ndarray, np.ndarray]:
@@ -72,6 +81,7 @@ class Chain(Process):
     def __init__(self, name: str, ingredients: tuple[Any, ...], p: float, r: float):
         super().__init__(name, ingredients)
         self.p, self.r = p, r
+        self.share, self.apart_from = constant(p), self
 
     def covariance(self, t, s):
         return self.p * (1.0 - self.p) * self.r ** np.abs(t - s).astype(float)

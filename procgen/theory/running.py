@@ -6,7 +6,7 @@ over all pairs of steps. Sums are two-sided, as in `linear`: 0 at step 0, and fo
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from typing import NamedTuple
 
 import numpy as np
@@ -20,6 +20,7 @@ Plain = Callable[[Space, Linear, Linear, Steps, Steps], np.ndarray]
 Of = Callable[[Steps, Steps], np.ndarray]
 LONGEST = 1 << 20  # lags over which a running sum of something stationary is added up
 LARGEST = 1 << 22  # pairs of steps over which another one is
+AT_ONCE = 1 << 16  # pairs of steps that are asked for in one go
 KEPT = 16  # tables of such pairs that are kept for the next question
 
 
@@ -43,13 +44,22 @@ def mixed(space: Space, x: Linear, y: Linear, t: Steps, s: Steps, plain: Plain) 
     """Cov(x(t), y(s)) of forms with processes among their sources."""
     (rest_x, own_x), (rest_y, own_y) = _split(x), _split(y)
     total = plain(space, rest_x, rest_y, t, s) if rest_x and rest_y else np.zeros(t.shape)
+    for (p, _), ones in _by_source(own_x).items():
+        for (q, _), others in _by_source(own_y).items():
+            if p is q or space.dependent(p, q):
+                total = total + _pairs(space, ones, others, t, s)
     for one, c in own_x.items():
-        for other, k in own_y.items():
-            total = total + c * k * _pair(space, one, other, t, s)
         total = total + c * _against(space, one, rest_y, t, s)
     for other, k in own_y.items():
         total = total + k * _against(space, other, rest_x, s, t)
     return total
+
+
+def _by_source(own: Mapping[Reading, float]) -> dict[tuple[Source, bool], dict[Reading, float]]:
+    found: dict[tuple[Source, bool], dict[Reading, float]] = {}
+    for one, c in own.items():
+        found.setdefault((one.source, one.summed), {})[one] = c
+    return found
 
 
 def steady(space: Space, form: Linear) -> bool:
@@ -76,10 +86,12 @@ def _split(form: Linear) -> tuple[Linear, dict[Reading, float]]:
     return Linear(rest), own
 
 
-def _pair(space: Space, one: Reading, other: Reading, t: Steps, s: Steps) -> np.ndarray:
+def _pairs(
+    space: Space, ones: Mapping[Reading, float], others: Mapping[Reading, float], t: Steps, s: Steps
+) -> np.ndarray:
+    """Cov of two processes, or of one with itself, each as it is read several times: each pair of steps once."""
+    one, other = next(iter(ones)), next(iter(others))
     p, q = one.source, other.source
-    if p is not q and not space.dependent(p, q):
-        return np.zeros(t.shape)
 
     def of(t: Steps, s: Steps) -> np.ndarray:
         if p is q:
@@ -89,10 +101,29 @@ def _pair(space: Space, one: Reading, other: Reading, t: Steps, s: Steps) -> np.
         return p.detail.with_process(p, q, t, s)
 
     sums = one.summed, other.summed
-    if not any(sums):
-        return of(one.at(t), other.at(s))
-    both = Linear({At(Base(source), 0): 1.0 for source in (p, q)})
-    return _added(space, of, sums, one.at(t), other.at(s), both, (p, q))
+    if any(sums):
+        both = Linear({At(Base(source), 0): 1.0 for source in (p, q)})
+
+        def at(t: Steps, s: Steps) -> np.ndarray:
+            return _added(space, of, sums, t, s, both, (p, q))
+    else:
+        at = of
+    late, c = np.array([each.at(t) for each in ones]), np.array(list(ones.values()))
+    early, k = np.array([each.at(s) for each in others]), np.array(list(others.values()))
+    total, few = np.zeros(t.shape), 1 if p.detail.filters or q.detail.filters else max(1, AT_ONCE // max(early.size, 1))
+    for first in range(0, len(c), few):
+        part = slice(first, first + few)
+        table = _once(at, *np.broadcast_arrays(late[part, None], early[None]))
+        total += np.tensordot(c[part], np.tensordot(k, table, (0, 1)), 1)
+    return total
+
+
+def _once(of: Of, t: Steps, s: Steps) -> np.ndarray:
+    """A covariance at pairs of steps of which many are the same."""
+    if t.shape[:2] == (1, 1):
+        return of(t[0, 0], s[0, 0])[None, None]
+    pairs, which = np.unique(np.stack([t.ravel(), s.ravel()]), axis=1, return_inverse=True)
+    return of(pairs[0], pairs[1])[which.ravel()].reshape(t.shape)
 
 
 def _against(space: Space, one: Reading, form: Linear, t: Steps, s: Steps) -> np.ndarray:

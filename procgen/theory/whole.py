@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
 from functools import cached_property
-from itertools import combinations
+from itertools import combinations, islice
 from typing import Any
 
 import numpy as np
@@ -107,15 +107,17 @@ class Theory(Mapping[str, SeriesTheory]):
         lags: int | Sequence[int] = 40,
         frequencies: Sequence[float] = FREQUENCIES,
         horizons: Sequence[int] = HORIZONS,
+        pairs: int | None = None,
     ) -> dict[str, Any]:
-        """What `procgen theory --json` prints."""
+        """What `procgen theory --json` prints; of series that go together so many pairs at most, all where None."""
         series = {name: theory.as_dict(at, lags, frequencies, horizons) for name, theory in self.series.items()}
         for name, told in series.items():
             told.update(self._missing(name))
             told.update(self._left(name))
             told.update(self._unfelt(name))
             told.update(self._rounded(name))
-        cross = [entry for a, b in combinations(self.series, 2) if (entry := self._cross_entry(a, b, at))]
+        found = (self._cross_entry(a, b, at) for a, b in combinations(self.series, 2))
+        cross = list(islice(filter(None, found), pairs))
         return {"series": series, "cross": cross, "correlation": [pair.as_dict() for pair in self.correlated]}
 
     def _missing(self, name: str) -> dict[str, Any]:

@@ -187,6 +187,17 @@ def test_missing_rows_are_named_once(frame):
     assert notes == ["1 row is missing, the first path 1, step 5"]
 
 
+@pytest.mark.parametrize("apart", [60, 1])
+def test_windows_that_keep_the_steps_of_their_record_cannot_be_judged(frame, apart):
+    record = frame.assign(step=frame["step"] + apart * frame["path"])
+    said = (
+        rf"got \d+ paths of 60 steps each that begin at steps of their own, such as 1 at step {apart}, as windows cut "
+        "from one long record do; number the steps of each path from 0, or, if they are one path, give them one name"
+    )
+    with pytest.raises(TableError, match=said):
+        validate(record, SPEC)
+
+
 def test_a_window_that_begins_later_cannot_be_judged(frame):
     """It departs from nothing: of no value that is there is anything wrong."""
     late = (
@@ -270,7 +281,7 @@ def test_a_series_without_chance_is_its_stated_values():
 
 
 def test_a_mean_alone_is_no_agreement():
-    garch = {"garch": {"sd": 2, "alpha": 0.15, "beta": 0.8}}
+    garch = {"garch": {"sd": 2, "alpha": 0.13, "beta": 0.86}}
     spec = read_spec({**RAW, "series": {"vol": [garch]}})
     path, step = np.divmod(np.arange(200 * 50), 50)
     table = pd.DataFrame({"path": path, "step": step})
@@ -278,7 +289,7 @@ def test_a_mean_alone_is_no_agreement():
     verdict = validate(table, spec)
     assert verdict.agrees is None
     assert verdict.title.startswith("CANNOT BE JUDGED: nothing about the spread of vol could be judged; only level")
-    assert "needs about 95 steps, not 50" in verdict.text()
+    assert "needs about 61 steps, not 50" in verdict.text()
 
 
 QUARTERS = {**RAW, "time": {"start": "2027-10-31", "every": "15min", "steps": 40, "zone": "Europe/Berlin"}}

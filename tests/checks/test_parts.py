@@ -5,7 +5,7 @@ import os
 import signal
 import subprocess
 import sys
-import time
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -18,6 +18,7 @@ from procgen.ensemble import plan as cuts
 from procgen.ensemble import render
 from procgen.ensemble.plan import Block
 from procgen.ensemble.source import read_spec
+from tests.waiting import wait_for
 
 WIDE = {
     "procgen": 1,
@@ -141,12 +142,8 @@ def started(out):
         text=True,
         start_new_session=True,
     )
-    children, until = [], time.monotonic() + 60
-    while not children and time.monotonic() < until:
-        with open(f"/proc/{process.pid}/task/{process.pid}/children", encoding="ascii") as file:
-            children = file.read().split()
-        time.sleep(0.01)
-    return process, int(children[0])
+    children = Path(f"/proc/{process.pid}/task/{process.pid}/children")
+    return process, int(wait_for("a worker process", lambda: children.read_text(encoding="ascii").split())[0])
 
 
 @pytest.fixture(scope="module")
@@ -180,10 +177,7 @@ def test_a_worker_does_not_outlive_the_process_that_started_it(parts):
     process, worker = started(parts)
     process.kill()
     process.communicate()
-    until = time.monotonic() + 60
-    while os.path.exists(f"/proc/{worker}") and time.monotonic() < until:
-        time.sleep(0.02)
-    assert not os.path.exists(f"/proc/{worker}")
+    wait_for("the end of the worker", lambda: not os.path.exists(f"/proc/{worker}"))
 
 
 def test_a_tick_for_every_row_of_all_workers(parts):

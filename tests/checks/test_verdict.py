@@ -245,7 +245,7 @@ def test_a_pipeline_may_insist_that_all_was_judged(options, code, tmp_path):
     from procgen.app import app
 
     body = [{"garch": {"omega": 0.05, "alpha": 0.1, "beta": 0.85}}]
-    raw = {"procgen": 1, "seed": 3, "paths": 600, "time": {"steps": 60}, "series": {"x": body}}
+    raw = {"procgen": 1, "seed": 3, "paths": 600, "time": {"steps": 40}, "series": {"x": body}}
     (tmp_path / "spec.yaml").write_text(json.dumps(raw))
     runner = CliRunner()
     assert runner.invoke(app, ["render", str(tmp_path / "spec.yaml"), "-o", str(tmp_path / "out")]).exit_code == 0

@@ -59,6 +59,10 @@ def test_what_is_stated_is_the_mean_of_what_is_measured(stated):
     found = waves.statistics(plan, x - plan.mean)
     error = found.std(axis=0) / np.sqrt(len(found))
     assert (np.abs(found.mean(axis=0) - waves.stated(plan)) < 5.5 * error).all()
+    mean, sd = waves.spread(plan)
+    assert mean == pytest.approx(waves.stated(plan)[0], abs=1e-9)
+    cosines = found[:, 0] - mean
+    assert abs(np.mean(cosines**2) - sd**2) < 5.5 * np.std(cosines**2) / np.sqrt(len(found))
 
 
 @pytest.mark.parametrize(

@@ -18,6 +18,7 @@ import numpy as np
 
 from procgen.ensemble import check_digest, plan, render
 from procgen.ensemble.columns import Column
+from tests.waiting import wait_for
 
 FACTORY = "tests.ensemble.fakes:fake_source"
 
@@ -63,8 +64,15 @@ class FakeRun:
     def tile(self, steps):
         if "_pause" in self.raw:
             time.sleep(self.raw["_pause"])
-        if self.raw.get("_die_at", -1) == self.step and "procgen.ensemble.worker" in sys.modules:
-            os._exit(7)
+        late, path = self.raw.get("_halt_from"), self.first_path
+        if late is not None and path >= late:
+            time.sleep(60)  # to be killed meanwhile
+        if self.raw.get("_die_at", -1) == self.step:
+            dead = Path(self.raw["_until"])
+            if "procgen.ensemble.worker" in sys.modules:
+                dead.touch()
+                os._exit(7)
+            wait_for("the death of a worker", dead.exists)
         out = {}
         for k, name in enumerate(self.raw["columns"]):
             values = np.empty((steps, self.paths))

@@ -16,6 +16,7 @@ import pytest
 import procgen as pg
 from procgen.ensemble import EnsembleError, cluster, plan
 from tests.ensemble.fakes import ROOT, fake_render, fake_spec, visible
+from tests.waiting import wait_for
 
 pytest.importorskip("distributed")
 
@@ -123,8 +124,7 @@ def test_a_scheduler_that_is_started_again_goes_on(machines, tmp_path, monkeypat
     parts = tmp_path / "out"
 
     def restart():
-        while not list(parts.glob("paths-*")):
-            time.sleep(0.02)
+        wait_for("the first part", lambda: list(parts.glob("paths-*")))
         machines.kill(machines.scheduler)
         machines.start_scheduler()
         for worker in machines.workers:
@@ -140,8 +140,7 @@ def test_a_worker_that_stands_still_holds_nobody_up(machines, tmp_path, monkeypa
     parts, still = tmp_path / "out", []
 
     def halt():
-        while not list(parts.glob("paths-*")):
-            time.sleep(0.02)
+        wait_for("the first part", lambda: list(parts.glob("paths-*")))
         still.append(machines.workers[0])
         still[0].send_signal(signal.SIGSTOP)
 
@@ -185,8 +184,7 @@ def test_a_render_that_is_killed_goes_on_with_resume(machines, tmp_path, digest)
 
     raw = {"seed": 5, "paths": 640, "steps": 60, "_pause": 0.15}
     process = start(raw, tmp_path / "out", part_bytes=MANY, scheduler=machines.address)
-    while not list((tmp_path / "out").glob("paths-*")):
-        time.sleep(0.02)
+    wait_for("the first part", lambda: list((tmp_path / "out").glob("paths-*")))
     process.kill()
     process.communicate()
     assert not (tmp_path / "out" / "manifest.json").exists()

@@ -2,9 +2,9 @@
 
 import json
 import os
+import re
 import subprocess
 import sys
-import time
 import urllib.error
 import urllib.request
 
@@ -19,6 +19,7 @@ from procgen.ensemble.places import Remote, place_of
 from procgen.ensemble.watched import Watched
 from procgen.spec import pages
 from tests.ensemble.fakes import ROOT, fake_check, fake_render, fake_spec, start
+from tests.waiting import wait_for
 
 pytest.importorskip("moto.server")
 SPEC = {"seed": 3, "paths": 640, "steps": 40, "columns": {"x": {}, "y": {"decimals": 1}}}
@@ -32,11 +33,8 @@ def server(tmp_path_factory):
     with open(log, "wb") as out:
         process = subprocess.Popen([sys.executable, "-m", "moto.server", "-p", "0"], stdout=out, stderr=out)
     try:
-        give_up = time.monotonic() + 60
-        while b"Running on http://" not in (said := log.read_bytes()):
-            assert time.monotonic() < give_up, said
-            time.sleep(0.05)
-        address = said.split(b"Running on http://", 1)[1].split(maxsplit=1)[0].decode()
+        running = re.compile(rb"Running on http://(\S+)\s")
+        address = wait_for("the S3 server", lambda: running.search(log.read_bytes()))[1].decode()
         yield address
     finally:
         process.kill()
@@ -74,16 +72,15 @@ def test_a_store_holds_the_digest_of_a_folder(bucket, tmp_path, monkeypatch, wor
 
 
 def test_killed_in_the_middle_of_uploads_it_goes_on_to_the_same_digest(bucket):
-    url, raw = bucket("runs/killed"), {**SPEC, "_pause": 0.5}  # five parts, half a second each
-    for _ in range(2):
-        process = start(raw, url, part_bytes=PART, workers=1, resume=True)
+    url = bucket("runs/killed")
+    for kept, halt in ((1, 256), (3, 512)):  # parts that are there when it is killed, and from which path on it halts
+        process = start({**SPEC, "_halt_from": halt}, url, part_bytes=PART, workers=1, resume=True)
         process.stdout.readline()
-        time.sleep(0.7)
+        wait_for(f"{kept} parts", lambda kept=kept: sum(name.startswith("paths-") for name in keys(url)) >= kept)
         process.kill()
         process.communicate()
         assert "manifest.json" not in keys(url)
-    raw = {**SPEC, "_pause": 0}
-    made = fake_render(fake_spec(**raw), url, workers=1, resume=True)
+    made = fake_render(fake_spec(**SPEC), url, workers=1, resume=True)
     assert made.digest == fake_render(fake_spec(**SPEC)).digest
     assert ".state" not in keys(url)
 

@@ -18,6 +18,7 @@ from procgen.ensemble.parquet import footer
 from procgen.ensemble.plan import STEPS
 from procgen.ensemble.store import PART
 from tests.ensemble.fakes import fake_check, fake_render, fake_spec, start, visible
+from tests.waiting import wait_for
 
 WIDE = {"seed": 3, "paths": 3000, "steps": 40, "columns": {"x": {}, "y": {"decimals": 1}}}
 LONG = {"seed": 3, "paths": 20, "steps": 3 * STEPS + 7, "columns": {"x": {}}}
@@ -68,8 +69,7 @@ def test_ctrl_c_and_termination_leave_whole_parts_and_no_process(tmp_path, signu
 @pytest.mark.parametrize("claimed", [False, True], ids=["programs", "forked"])
 def test_a_second_render_into_one_folder_is_refused_until_the_first_is_dead(tmp_path, claimed):
     first = start(WIDE | {"_pause": 9.0}, tmp_path, **PARTS, claimed=claimed, workers=2)
-    while not (tmp_path / ".state" / "plan.json").exists():
-        time.sleep(0.01)
+    wait_for("the plan of the first render", (tmp_path / ".state" / "plan.json").exists)
     with pytest.raises(EnsembleError, match=f"another render is at work in .* \\(process {first.pid}\\)"):
         fake_render(fake_spec(**WIDE), tmp_path, overwrite=True)
     first.kill()
@@ -79,10 +79,10 @@ def test_a_second_render_into_one_folder_is_refused_until_the_first_is_dead(tmp_
 
 def test_a_worker_that_dies_is_reported_and_the_rest_is_kept(tmp_path, monkeypatch):
     monkeypatch.setattr(plan, "PART_BYTES", PARTS["part_bytes"])
-    spec = fake_spec(**WIDE, _die_at=0, _pause=0.3)
+    spec = fake_spec(**WIDE, _die_at=0, _until=str(tmp_path / "dead"))
     with pytest.raises(EnsembleError, match=r"a worker process died \(exit code 7\).*--resume"):
-        fake_render(spec, tmp_path, workers=2)
-    assert fake_render(spec, tmp_path, workers=1, resume=True).digest == fake_render(spec).digest
+        fake_render(spec, tmp_path / "out", workers=2)
+    assert fake_render(spec, tmp_path / "out", workers=1, resume=True).digest == fake_render(spec).digest
 
 
 @contextlib.contextmanager

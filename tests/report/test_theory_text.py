@@ -141,3 +141,15 @@ def test_equations_stand_in_the_order_of_the_spec():
     lines = equations(pg.load(raw), 100)
     labels = [line.split()[0] for line in lines if line.startswith("  ") and line[2] != " "]
     assert labels == ["whole", "exp", "inner", "size", "white_noise", "constant"]
+
+
+def test_of_many_series_that_go_together_the_first_pairs_are_told():
+    """21 series of one weather make 210 pairs: a text has 200 and says so, JSON has all; 20 series have 190."""
+    for count, more in ((20, 0), (21, 1)):
+        group = {"names": {"prefix": "s_", "count": count}, "of": [{"use": "w"}]}
+        raw = {"procgen": 1, "seed": 1, "paths": 4, "time": {"steps": 2}, "groups": {"shops": group}}
+        spec = pg.load(raw | {"shared": {"w": [{"white_noise": {"sd": 1}}]}})
+        text, told = theory_text(spec, pg.theory(spec), (0,), 1), theory_json(spec, pg.theory(spec), (0,), 1)
+        assert text.count(" with s_") == min(count * (count - 1) // 2, 200)
+        assert text.count("… and more pairs of series") == more
+        assert len(json.loads(told)["cross"]) == count * (count - 1) // 2

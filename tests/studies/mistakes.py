@@ -47,6 +47,12 @@ MISTAKES: Mapping[str, str] = {
     "paths cut from one long series": "flow: structure: each path goes on where the one before ended",
     "paths standardised one by one": "load: structure: each path has mean 0 and standard deviation 1",
     "season's phase drawn by path": "day: structure: the season of 12 steps is in each path at a time of its own",
+    "gaps filled with 0": "load: structure: ",
+    "gaps filled with the value before": "load: structure: ",
+    "all values standardised together": "load: structure: all values together have mean 0 and standard deviation 1",
+    "each second path mirrors the one before": "load: structure: each step has mean 0",
+    "seeds shared with the next path": "load ~ day: structure: path p of day repeats the draws of path p",
+    "float32 on the way": "load: structure: values went through float32",
 }
 COLUMNS = {"path": "run", "time": "at", "flow": "m3", "load": "kW", "day": "Tag", "gain": "profit"}
 
@@ -65,13 +71,26 @@ def simulated(mistake: str, seed: int, paths: int = PATHS, steps: int = STEPS) -
     load = sd * rng.standard_normal((paths, steps))
     if mistake.startswith("paths standardised"):
         load = (load - load.mean(axis=1, keepdims=True)) / load.std(axis=1, keepdims=True)
+    if mistake.startswith("gaps filled"):
+        gone = rng.random((paths, steps)) < 0.02
+        gone[:, 0] = False
+        load = np.where(gone, 0.0 if mistake.endswith("0") else np.roll(load, 1, axis=1), load)
+    if mistake.startswith("all values"):
+        load = (load - load.mean()) / load.std()
+    if mistake.startswith("each second"):
+        load[1::2] = -load[::2]
+    if mistake.startswith("float32"):
+        load = load.astype(np.float32).astype(float)
+    noise = rng.standard_normal((paths, steps))
+    if mistake.startswith("seeds shared"):
+        noise[:-1] = load[1:] / sd
     step = np.arange(steps) + (1 if mistake.startswith("season starts") else 0)
     if mistake.startswith("season's phase"):
         step = step + rng.uniform(0, 12, (paths, 1))
     return {
         "flow": 5 + flow[:, BURN:].reshape(paths, steps),
         "load": load,
-        "day": np.cos(2 * np.pi * (step - 4) / 12) + rng.standard_normal((paths, steps)),
+        "day": np.cos(2 * np.pi * (step - 4) / 12) + noise,
         "gain": scale * rng.standard_t(5, (paths, steps)),
     }
 

@@ -113,6 +113,23 @@ def alike_at_first(x: np.ndarray, size: float, steps: int = 12) -> np.ndarray:
     return out
 
 
+def followed(x: np.ndarray, size: float, rng: np.random.Generator) -> np.ndarray:
+    """Poisson counts of mean 5 whose normal scores, spread over the chance of a count, follow the count before.
+
+    What spreads them knows nothing of it, so that scores follow by the variance of their means by count less.
+    """
+    counts = np.arange(60)
+    ends = stats.norm.ppf(stats.poisson.cdf(np.array([counts - 1, counts]), 5))
+    chance = stats.poisson.pmf(counts, 5)
+    means = np.diff(-stats.norm.pdf(ends), axis=0)[0] / np.maximum(chance, 1e-300)
+    slope = size / float(np.sum(np.where(chance > 1e-12, chance * means**2, 0.0)))
+    out = x.copy()
+    for t in range(1, x.shape[1]):
+        before = np.clip((out[:, t - 1] - 5) / math.sqrt(5), -3, 3)
+        out[:, t] = stats.poisson.ppf(stats.norm.cdf(rng.standard_normal(len(x)) + slope * before), 5)
+    return out
+
+
 def wider_by_cosine(body: Any, x: np.ndarray, size: float) -> np.ndarray:
     """Values times a factor that makes the mean cosine, by theory, less by `size`."""
     from procgen.theory import theory

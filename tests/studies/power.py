@@ -38,6 +38,7 @@ from tests.studies.plants import (
     drawn,
     error_moments,
     evened,
+    followed,
     lone,
     ma_of,
     missing_alike,
@@ -60,6 +61,7 @@ FAT = [{"ar": {"phi": 0.7, "sd": 1}}, {"white_noise": {"sd": 0.5, "law": t(4)}}]
 GARCH = [{"garch": {"omega": 0.05, "alpha": 0.10, "beta": 0.85}}]
 SEASON = [{"seasonal": {"period": 12, "harmonics": [{"amplitude": 1, "peak": 3}]}}, {"white_noise": {"sd": 1}}]
 HEAVY = [{"constant": 0}, {"ar": {"phi": 0.6, "total_sd": 1, "law": t(9)}}, {"white_noise": {"sd": 0.5}}]
+COUNTS = [{"poisson": {"mean": 5}}]
 LONE = {"branches": {"a": [{"white_noise": {"sd": 1}}], "b": [{"white_noise": {"sd": 2}, "as": "wide"}]}}
 REGIMES = [{"regimes": {**LONE, "durations": {"a": 4, "b": 4}}}]
 
@@ -227,6 +229,9 @@ PLANTS = (
           drawn(lambda d: noise(math.exp(score_shift(d, 1, 3, True)), law=t(3))), by="sd"),
     Plant("share below the 1% quantile", "step 199", noise(law=t(9)), drawn(lambda d: noise(
         stats.t.ppf(0.01, 9) / stats.t.ppf(0.01 + d, 9), law=t(9))), by="sd"),
+    Plant("share below the 99% quantile", "step 199", noise(law=t(9)), drawn(lambda d: noise(
+        stats.t.ppf(0.99, 9) / stats.t.ppf(0.99 - d, 9), law=t(9))), by="sd"),
+    Plant("shocks: slope on the value before", "all steps", COUNTS, spoilt(COUNTS, followed), by="counts that follow"),
     Plant("mean", "step 50", noise(law=t(9)), drawn(lambda d: noise(level=d, law=t(9))), by="constant"),
     Plant("variance", "step 50", noise(law="laplace"), drawn(lambda d: noise(_wider(1, d), law="laplace")), by="sd"),
     Plant("covariance", "steps 100, 101", ar(law="laplace"), drawn(lambda d: ar(phi=0.6 + d, law="laplace")),
@@ -282,7 +287,7 @@ def _checks(plant: Plant, gather: Any) -> Iterator[Any]:
         return cross_checks(plant.series, gather.cross[pair], gather.plan.shock_pairs[pair].at)
     if plant.what.startswith("shocks: correlation "):
         return untied_checks(plant.series, gather.cross[pair])
-    if plant.what.startswith("shocks: "):
+    if plant.what.startswith("shocks: ") and plant.series not in gather.led:
         return shock_checks(plant.series, gather.shocks[plant.series], "")
     return judged(gather)
 

@@ -97,3 +97,18 @@ def test_what_is_not_added_up():
     )
     assert th["twice"].variance([5]) is None and "a sum of sums" in th["twice"].reason("variance")
     assert th["square"].variance([5]) is None and "running sums" in th["square"].reason("variance")
+
+
+def test_a_bend_of_fractional_noise_beside_that_noise():
+    """Cov(x₊, y) = P(x > 0) Cov(x, y) for normal x and y of mean 0 (Stein 1981, Ann. Stat. 9, 1135-1151, lemma 2)."""
+    th = series(
+        "  bend: {hinge: {of: [{use: w}], above: 0}}\n  body: {use: w}\n  beside: [{use: bend}, {use: body}]\n"
+        "  clip: {clip: {of: [{use: w}, {white_noise: {sd: 1}}], low: 0}}",
+        rest="shared:\n  w: {fractional_gaussian_noise: {hurst: 0.8, sd: 2}}",
+    )
+    known = th["body"].covariance(T, S)
+    for bend in ("bend", "clip"):
+        np.testing.assert_allclose(th.cross(bend, "body").covariance(T, S), known / 2, rtol=1e-9)
+    together = th["bend"].covariance(T, S) + known + known  # twice the half of it, and the body itself
+    np.testing.assert_allclose(th["beside"].covariance(T, S), together, rtol=1e-9)
+    assert th["clip"].autocovariance([1])[0] > 0
