@@ -262,7 +262,7 @@ forked.possible = lambda: {failing == "os.fork"}
 
 
 @linux
-@pytest.mark.parametrize("more,workers", [(40, 1), (40, 2)])
+@pytest.mark.parametrize("more,workers", [(16, 1), (16, 2)])
 def test_too_little_memory(tmp_path, more, workers):
     spec = written(tmp_path, SMALL | {"paths": 20_000})
     limit = f"""
