@@ -131,8 +131,9 @@ def _not_finite(column: Column, values: np.ndarray, first_path: int, first_step:
     where = f"series {column.name}: the value at path {first_path + path}, step {first_step + step}"
     if np.isnan(values[step, path]):
         return EnsembleError(
-            f"{where} is not a number: a logit got what is not between its low and high, or two infinities met; hold "
-            "the body of a logit within its levels (by clip, or levels further apart), what explodes to fewer steps"
+            f"{where} is not a number: a logit got what is not between its low and high, counts got a mean beyond what "
+            "whole numbers a double holds, or two infinities met; hold the body of a logit within its levels (by clip, "
+            "or levels further apart), make the mean of counts smaller, and hold what explodes to fewer steps"
         )
     return EnsembleError(
         f"{where} is {values[step, path]}, not a finite number: it is beyond 1.8e308; make smaller what exp, power or "

@@ -196,7 +196,7 @@ def _twice(owner: str, entry: Entry, first: Entry) -> tuple[Place, str]:
     line = f" in line {first.place.line}" if first.place.line else ""
     if named(entry):
         return entry.places["as"], f"the label {entry.label} is taken in {owner}{line}; choose another"
-    need = f"needs a label of its own, by which its draws are found; write as: some_name beside {entry.kind}"
+    need = f"needs a label of its own, by which it and its draws are found; write as: some_name beside {entry.kind}"
     if first.kind == entry.kind and not named(first):
         return entry.place, f"a second {entry.kind} in {owner} (the first is{line or ' before it'}) {need}"
     return entry.place, f"the label {entry.label} is taken in {owner}{line}, so this {entry.kind} {need}"

@@ -6,6 +6,35 @@ import difflib
 import math
 from collections.abc import Iterable
 
+# what people call things elsewhere, and what they go by here, where that is among the choices; a logarithm by nothing
+OTHERWISE = {
+    "sigma": ("sd", "total_sd"),
+    "std": ("sd", "total_sd"),
+    "stdev": ("sd", "total_sd"),
+    "scale": ("sd",),
+    "variance": ("sd",),
+    "var": ("sd",),
+    "sine": ("seasonal",),
+    "sin": ("seasonal",),
+    "cos": ("seasonal",),
+    "cosine": ("seasonal",),
+    "normal": ("white_noise",),
+    "gaussian": ("white_noise", "normal"),
+    "noise": ("white_noise",),
+    "level": ("constant",),
+    "mean": ("constant",),
+    "linear": ("trend",),
+    "slope": ("trend",),
+    "drift": ("trend",),
+    "log": (),
+    "multiply": ("product",),
+    "divide": ("product",),
+    "add": ("sum",),
+    "shift": ("lag",),
+    "cumsum": ("integrate",),
+    "lognormal": ("exp",),
+}
+
 
 def unknown_key(key: str, allowed: Iterable[str]) -> str:
     """Return the message for a key nobody declared, with the nearest valid one."""
@@ -25,6 +54,8 @@ def nearest(given: object, names: Iterable[str]) -> str | None:
     if not isinstance(given, str) or len(given) > 100:
         return None
     names = list(names)
+    if given in OTHERWISE:
+        return next((name for name in OTHERWISE[given] if name in names), None)
     swapped = [name for name in names if sorted(name) == sorted(given)]
     return next(iter(swapped or difflib.get_close_matches(given, names, n=1, cutoff=0.6)), None)
 
@@ -64,6 +95,8 @@ def unquote(value: object) -> str:
     """Return a hint when a text looks like a number."""
     if not isinstance(value, str) or len(value) > 40:
         return ""
+    if value.endswith("%"):
+        return "write a share, such as 0.05 for 5 %"
     try:
         if not math.isfinite(float(value)):
             return "it must be finite: give the number itself, or take it out"

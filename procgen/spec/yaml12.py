@@ -197,7 +197,7 @@ class _Planter:
         values: dict[str, Tree] = {}
         keys: dict[str, Tree] = {}
         for key, value in node.value:
-            name = self._key(key, place.path)
+            name = self._key(key, place.path, alone=value.value is None)
             if name is None:
                 continue
             spot = Place(self.file, key.line, key.column, step_into(place.path, name))
@@ -209,14 +209,15 @@ class _Planter:
             keys[name] = Tree(name, spot)
         return Tree(values, place, keys)
 
-    def _key(self, key: _Node, path: str) -> str | None:
+    def _key(self, key: _Node, path: str, alone: bool) -> str | None:
         place = Place(self.file, key.line, key.column, path)
         if key.plain and key.value == "<<":
             self._fault(place, "merge keys (<<) are not part of YAML 1.2; write the keys out, or use one alias")
         elif key.tag is not None:
             self._fault(place, f"tags such as {key.tag[:40]} are not allowed; remove it, or quote a text")
         elif not isinstance(key.value, str):
-            self._fault(place, f"expected a key that is a text, got {Tree(_outline(key), place).show()}")
+            comma = "; write a decimal sign as a point, and no comma within a number" if key.plain and alone else ""
+            self._fault(place, f"expected a key that is a text, got {Tree(_outline(key), place).show()}{comma}")
         elif hidden := hidden_in(key.value):
             self._fault(place, hidden)
         else:

@@ -117,6 +117,15 @@ def test_bodies_within_records_are_read():
          "expected a number above 0, got .inf; the number must be finite (sd: standard deviation)"),
         ("{white_noise: {sd: '1'}}", "x.white_noise.sd", 25, 'expected a number above 0, got "1"; this is a text; '
          "write the number plainly, without quotes, spaces or underscores (sd: standard deviation)"),
+        ("{white_noise: {sigma: 1}}", "x.white_noise.sigma", 21,
+         "unknown key sigma; expected sd or law; did you mean sd?"),
+        ("{sine: {period: 3}}", "x.sine", 7,
+         "unknown term sine; did you mean seasonal? `procgen terms` lists them all"),
+        ("{log: {sd: 3}}", "x.log", 7, "unknown term log; `procgen terms` lists them all"),
+        ("{white_noise: {sd: 1,5}}", "x.white_noise", 27, "expected a key that is a text, got 5; write a decimal sign "
+         "as a point, and no comma within a number"),
+        ("{white_noise: {sd: 5%}}", "x.white_noise.sd", 25, 'expected a number above 0, got "5%"; write a share, such '
+         "as 0.05 for 5 % (sd: standard deviation)"),
         ("{white_noise: {sd: '0,5'}}", "x.white_noise.sd", 25,
          'expected a number above 0, got "0,5"; write the decimal sign as a point (sd: standard deviation)'),
         ("{white_noise: {sd: true}}", "x.white_noise.sd", 25,
@@ -227,8 +236,8 @@ correlation: {between: [load.ar, load.garhc], value: 2}
         "  at series.load[0].ar.sd (a.yaml, line 6, column 31)",
         "alpha + beta must be below 1 for a finite variance, got 1.4; lower one\n"
         "  at series.load[1].garch.alpha (a.yaml, line 7, column 22)",
-        "a second ar in load (the first is in line 6) needs a label of its own, by which its draws are found; write "
-        "as: some_name beside ar\n  at series.load[2] (a.yaml, line 8, column 7)",
+        "a second ar in load (the first is in line 6) needs a label of its own, by which it and its draws are found; "
+        "write as: some_name beside ar\n  at series.load[2] (a.yaml, line 8, column 7)",
         "there is no series or shared body named waether; expected weather or load; did you mean weather?\n"
         "  at series.load[3].use (a.yaml, line 9, column 12)",
         "expected the key sd (standard deviation: a number above 0)\n"

@@ -6,7 +6,7 @@ import pytest
 import procgen as pg
 from tests.spec.small import HEAD, faults, read
 
-NEED = "needs a label of its own, by which its draws are found; write as: some_name beside"
+NEED = "needs a label of its own, by which it and its draws are found; write as: some_name beside"
 
 
 def series(text):

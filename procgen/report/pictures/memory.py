@@ -72,6 +72,8 @@ class Comparison:
             return f"Seen correlations only; what they should be is not known: {self.reason or 'no closed form'}."
         if self.seen is None:
             return "The stated correlations alone: there are too few paths to show them across paths."
+        if not np.isfinite(self.seen).any():
+            return "The stated correlations alone: there are too few steps to show any."
         if self.low is None or self.high is None:
             far = float(np.nanmax(np.abs(self.seen - self.stated)))
             return f"No seen one is further than {far:.2g} from the stated one; paths are too few for a band of chance."
