@@ -131,6 +131,7 @@ BEYOND = {
     r"symmetric matrix|rows of 2 for 2|expected 2 rows|squares that sum|at most 1e\+13 values|an int64 has no decimals",
     "how a list of names is read": "expected a list of at least two names",
     "a number that is not finite": "the number must be finite",
+    "a comma in a number, which YAML takes for the end of it": "no comma within a number",
     "a key that means nothing without another": "means nothing without|says its own spread|cannot vary|count only on",
     "the steps of the grid": "needs the length of a step|expected steps that end by",
     "the clock and the calendar": "expected a (time zone|date|year|start)|does not exist in|has an offset that|unknown "
