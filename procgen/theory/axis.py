@@ -48,9 +48,9 @@ class Axis(Volatile, Stating, Bending):
     def __post_init__(self) -> None:
         self.space = Space(self.correlation, self.horizon)
 
-    def at_work(self, name: str, period: float | None = None) -> None:
-        """Say which term writes its moments next."""
-        self.space.name, self.period = name, period
+    def at_work(self, name: str, period: float | None = None, bounded: bool = False) -> None:
+        """Say which term writes its moments next, and whether its values have bounds."""
+        self.space.name, self.period, self.space.bounded = name, period, bounded
 
     def known(self, f: Callable[[np.ndarray], np.ndarray], constant: bool = False) -> Expression:
         """A deterministic series: f of int64 steps (negative ones too) gives float64 values of the same shape."""

@@ -13,11 +13,11 @@ from typing import Any
 import numpy as np
 
 from procgen.theory import known
-from procgen.theory.expression import Expression, chosen, product
+from procgen.theory.expression import Expression, chosen, opaque, product
 from procgen.theory.joint import larger_law, product_law
 from procgen.theory.known import Known
 from procgen.theory.lattice import Rounded
-from procgen.theory.laws import LOST, is_gaussian, marginal
+from procgen.theory.laws import LOST, highest_moment, is_gaussian, marginal
 from procgen.theory.lumps import Bounded, Folded, Mapped, powered
 from procgen.theory.processes import Curved, Hinged, Process, mean_at
 from procgen.theory.sources import Space
@@ -43,9 +43,6 @@ class Bending:
         raise NotImplementedError
 
     def opaque(self, ingredients: Sequence[Expression], reason: str) -> Expression:
-        raise NotImplementedError
-
-    def _given_up(self, noise: Expression, reason: str) -> Expression:
         raise NotImplementedError
 
     def hinge(self, x: Expression) -> Expression:
@@ -177,13 +174,21 @@ class Bending:
         if not is_gaussian(x):
             if x.branches is not None:
                 return chosen([(flag, self._bent(branch, f, made)) for flag, branch in x.branches()])
-            return self._given_up(x, "moments of a bend are not worked out for a body that is not Gaussian")
+            why = f"{self.name}: moments of a bend are not worked out for a body that is not Gaussian"
+            return opaque(self.space, (x,), why, highest=_order(x))  # no bend grows faster than its body
         process, steady = made(x), judge(x).covariance_stationary
         if steady and x.mean_path.value is not None:
             return self.process(process, known.constant(float(process.mean(np.zeros(1, np.int64))[0])))
         periods, note = x.mean_path.periods if steady else None, f"the mean moves in {self.name}"
         key = ("mean", self.name, len(self._processes))
         return self.process(process, known.whole(key, process.mean, periods, note))
+
+
+def _order(x: Expression) -> float | None:
+    try:
+        return highest_moment(x)
+    except Unknown:
+        return None
 
 
 def _positive(v: np.ndarray) -> np.ndarray:

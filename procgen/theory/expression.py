@@ -212,13 +212,22 @@ def product(space: Space, expressions: Sequence[Expression]) -> Expression:
     return replace(_sorted_out(space, whole), lumpy=any(x.lumpy for x in expressions), branches=branches)
 
 
-def opaque(space: Space, ingredients: Sequence[Expression], reason: str, mean: Known | None = None) -> Expression:
-    """A series whose covariances are unknown for a reason; its mean too unless it is given."""
+def opaque(
+    space: Space,
+    ingredients: Sequence[Expression],
+    reason: str,
+    mean: Known | None = None,
+    highest: float | None = None,
+) -> Expression:
+    """A series whose covariances are unknown for a reason; its mean too unless it is given.
+
+    `highest` is the order below which its moments exist, where that is known; all of what has bounds do.
+    """
     behind = {source for x in ingredients for source in x.sources}
     depends = frozenset(root for s in behind for root in roots(s))
     source = Source(
         f"opaque {next(_serial)}", OPAQUE, np.nan, detail=tuple(ingredients), depends=depends, reason=reason,
-        centred=mean is not None,
+        centred=mean is not None, highest=np.inf if space.bounded else highest,
     )  # fmt: skip
     lumpy = any(x.lumpy for x in ingredients)
     return Expression(space, mean or known.constant(0.0), Linear({At(Base(source), 0): 1.0}), lumpy=lumpy)

@@ -171,7 +171,9 @@ def _exponential_order(space: Space, form: Linear) -> float:
 
 def _order(source: Source) -> float:
     if source.kind == OPAQUE:
-        raise Unknown(source.reason)
+        if source.highest is None:
+            raise Unknown(source.reason)
+        return source.highest
     if source.kind == PROCESS:
         return float(source.detail.highest_moment)
     if source.kind in (GARCH, SQUARES):

@@ -40,6 +40,7 @@ class Source:
     depends: frozenset[Source] = frozenset()
     reason: str = ""
     unit: float = 1.0  # of independent shocks: what a shock of the law is multiplied by
+    highest: float | None = None  # of an opaque source: the order below which its moments exist, if that is known
     centred: bool = True  # False for an opaque source whose mean is not known either
 
     @property
@@ -72,6 +73,7 @@ class Space:
     correlations: Mapping[frozenset[str], float] = field(default_factory=dict)
     horizon: int = 4096  # the steps over which the shape of a known function counts
     name: str = "the series"  # the term that is at work, for reasons
+    bounded: bool = False  # whether all its values lie between two numbers
     sources: dict[str, Source] = field(default_factory=dict)
     origins: dict[Any, str] = field(default_factory=dict)  # where a running sum was written, by its key
     last: dict[Any, Any] = field(default_factory=dict)  # the state space that was asked last, by its forms

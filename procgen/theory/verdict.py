@@ -172,7 +172,14 @@ def _constant_path(source: Source) -> bool:
 
 def _source(findings: _Findings, source: Source) -> None:
     if source.kind == OPAQUE:
-        _ingredients(findings, source.detail)
+        behind = _Findings(findings.space)
+        _ingredients(behind, source.detail)
+        if source.highest is not None and source.highest > 2.0:  # it has a variance, whatever its ingredients have
+            behind.found.pop(INFINITE, None)
+        for verdict, reasons in behind.found.items():
+            for reason in reasons:
+                findings.say(verdict, reason)
+        findings.notes += behind.notes
         findings.notes.append(f"moments unknown: {source.reason}")
     elif source.kind in (GARCH, SQUARES):
         _heteroskedastic(findings, source)

@@ -11,6 +11,7 @@ from typing import Any
 import numpy as np
 
 from procgen.spec.words import did_you_mean
+from procgen.terms.supports import support_of
 from procgen.theory.axis import Axis
 from procgen.theory.doubles import rounding_of
 from procgen.theory.expression import Expression, opaque
@@ -241,7 +242,9 @@ def _moments(axis: Axis, node: Any, memo: dict[int, Expression]) -> Any:
         return None  # a primary stream: the term that draws from it writes the source
     if id(node) not in memo:
         inputs = [x for part in node.inputs if (x := _moments(axis, part, memo)) is not None]
-        axis.at_work(node.name, node.term.values.get("period"))
+        support = support_of(node)
+        bounded = -np.inf < support.low and support.high < np.inf
+        axis.at_work(node.name, node.term.values.get("period"), bounded)
         try:
             with np.errstate(over="ignore", invalid="ignore", under="ignore"):
                 memo[id(node)] = node.term.moments(axis, *inputs)
