@@ -41,7 +41,7 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True, paths:
     for name, declared in spec.series.items():
         doubles = rounding_of(th, name, steps)
         grain = max(_grain(declared, th[name], steps), 0.0 if doubles is None else doubles.cell)
-        lost = str(doubles) if doubles is not None and doubles.hides else beyond_doubles(th[name], steps)
+        lost = str(doubles) if doubles is not None and doubles.hides else beyond_doubles(th, name, steps)
         found = Cannot(lost) if lost else route(name, th[name], graph, grain, same_draws, (paths, steps))
         routes[name] = way = in_doubles(found, doubles)
         if isinstance(way, Route):

@@ -33,6 +33,7 @@ class HiddenStates:
     """What a node answers to `rank`, as a term would: its value is that of `InState` in each state of its chains."""
 
     watched: tuple[str, ...] = ()
+    piles: tuple[float, ...] = ()
 
     def __init__(self, node: Node, known: list[Node], chains: list[Any], grain: float):
         self._node, self._known, self._half = node, known, grain / 2.0

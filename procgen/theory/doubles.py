@@ -17,10 +17,12 @@ SEEN = 1e-6  # cell over the standard deviation of moves up to which nothing sho
 ROUGH = 0.02  # the same up to which roundings that add up, or differ by step, leave moments as they are
 COARSE = 0.5  # the same of roundings that do neither
 _SURE = 1e-12  # the same, of the standard deviation of the values: moves are no millionth of it
+_NOTHING = 1e-12  # share of the largest standard deviation: what is less is left by rounding
 _FAR = 3.0  # standard deviations
 _LOST = 1e-9  # share of a variance below which a difference of covariances is rounding
 _QUARTERS = 1.3489795003921634  # between the quartiles of a normal law, in standard deviations
 _PASSING = frozenset({"sum", "use", "lag", "difference", "integrate", ""})  # they keep the cells of what they are given
+_EXPONENTIALS = frozenset({"exp", "geometric_brownian_motion", "merton"})
 _KEEPING = frozenset({"integrate", "lag", "difference"})  # their values are made of earlier ones
 _ADDING = frozenset({"sum", "use", "lag", "difference", "exp", ""})  # each value of theirs is rounded by itself
 
@@ -83,15 +85,17 @@ def rounding_of(theory: Any, name: str, steps: int) -> Rounding | None:
     return Rounding(cell, least, level, moves, adds_up or x.discrete)
 
 
-def beyond_doubles(x: Any, steps: int) -> str:
-    """Why sums of fourth powers of a series' values are no numbers; empty where they are."""
-    at = _steps_of(steps)
+def beyond_doubles(theory: Any, name: str, steps: int) -> str:
+    """Why sums of fourth powers of a series' values are no numbers; empty where they are, or logarithms are judged."""
+    x, at = theory[name], _steps_of(steps)
+    if theory.graph is not None and theory.graph.series[name].term.kind in _EXPONENTIALS:
+        return ""
     law = x.marginal(int(at[-1]))
     sizes = _sizes(x, at) if law is None else _quartiles(law, at)  # a long tail is no large unit
     moving = np.zeros(0) if sizes is None else sizes[1][sizes[1] > 0.0]
-    if not moving.size or (LEAST <= moving.min() and np.isfinite(moving.max()) and moving.max() <= MOST):
+    spread = float(moving.max(initial=0.0))
+    if not np.isfinite(spread) or spread == 0.0 or LEAST <= spread <= MOST:
         return ""
-    spread = moving.min() if moving.min() < LEAST else moving.max()
     return f"its standard deviation of {spread:.3g} has powers that no double holds: choose another unit".replace(
         "e-", "e−"
     )
@@ -142,7 +146,7 @@ def _cell_of(theory: Any, node: Any, at: np.ndarray, known: dict[int, Any]) -> t
 
 def _moves(x: Any, at: np.ndarray, sd: np.ndarray) -> np.ndarray:
     """The least standard deviation of values, and of their first and second differences, at each step; inf for none."""
-    found = np.where(sd > 0.0, sd * sd, np.inf)
+    found = np.where(sd > _NOTHING * sd.max(), sd * sd, np.inf)
     for i, t in enumerate(at):
         for weights in ((1.0, -1.0), (1.0, -2.0, 1.0)) if t >= 2 else ():
             found[i] = min([found[i], *_difference(x.covariance, int(t), np.array(weights))])
