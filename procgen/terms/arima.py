@@ -162,7 +162,7 @@ class Arima(Integrated):
     purpose = "a filter of shocks, integrated: its differences are an arma, with a seasonal part if there is one"
     source = "Box & Jenkins (1970), ch. 4 and 9; regression signs"
     example = "arima: {d: 1, theta: -0.4, seasonal: {period: 4, d: 1, theta: -0.3}, sd: 0.037}"
-    knows = "mean and covariance at any steps; Gaussian law for normal shocks"
+    knows = "mean and covariance at any steps, its differences stationary from step 1 on; Gaussian for normal shocks"
     by_rows = ("phi", "theta", "drift", "start", "sd")
     begins_by_rows = True
     parameters: ClassVar[tuple[Parameter, ...]] = (
