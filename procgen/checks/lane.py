@@ -142,7 +142,8 @@ class Lane:
             sums.squares[plan.name].absorb(x, self.step, self.squares[plan.name])  # type: ignore[arg-type]
         route = sums.routes.get(plan.name)
         if route is not None:
-            z, self.carriers[plan.name] = route.tile(x, self.carriers[plan.name], self.first_path, self.step)
+            out = self.shocks[plan.name].scores.next(len(x)) if route.kalman and plan.name in self.shocks else None
+            z, self.carriers[plan.name] = route.tile(x, self.carriers[plan.name], self.first_path, self.step, out)
             if route.stopped:
                 sums.stopped[plan.name] = route.stopped
             if plan.name in sums.events and self.carriers[plan.name] is not None:

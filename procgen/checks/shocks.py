@@ -6,6 +6,7 @@ cutting. A :class:`ShockLane` carries what the next tile of the same paths needs
 
 from __future__ import annotations
 
+import math
 from collections import Counter
 from collections.abc import Sequence
 from dataclasses import dataclass, field
@@ -135,11 +136,11 @@ class ShockSums:
     def absorb(self, z: NDArray, first_step: int, lane: ShockLane, x: NDArray | None = None) -> None:
         """Add the shocks of a tile, NaN where there is none, of the values x."""
         lane._earlier = None
-        known = np.isfinite(z)
-        whole, offset = bool(known.all()), 0
+        whole, offset = _all_known(z), 0
+        known = z if whole else np.isfinite(z)
         if not whole and not lane.scores.held:  # nothing is carried so far: it begins with the first shock
             offset = int(np.argmax(known.any(axis=1)))
-            z, known, x = z[offset:], known[offset:], None if x is None else x[offset:]
+            z, known, x = z[offset:].copy(), known[offset:], None if x is None else x[offset:]  # z may be of the window
             whole = bool(known.all())
             if not known[0].any():
                 return
@@ -313,6 +314,11 @@ class ShockSums:
 
 
 SHOCK_ARRAYS = ("sums", "counts", "paths", "profile", "memory", "cluster", "asymmetry", "square", "stretched", "phases")
+
+
+def _all_known(z: NDArray) -> bool:
+    """Whether all of an array is finite: its product with itself tells, but for an overflow, in half the time."""
+    return (z.flags.c_contiguous and math.isfinite(np.dot(z.ravel(), z.ravel()))) or bool(np.isfinite(z).all())
 
 
 def _pairs(view: NDArray, lags: Sequence[int], steps: int) -> NDArray | int:
