@@ -46,10 +46,11 @@ class ShockLane:
     """What is carried from tile to tile for one range of paths.
 
     `scores` and `clusters` hold the last rows; `view` and `sizes` are those of both, the newest tile at their end.
+    Only where the series is compared with others (`paired`) is all of `sizes` sure to be there.
     """
 
-    def __init__(self, paths: int, lags: Sequence[int] = MEMORY_LAGS, first_path: int = 0):
-        self.first_path = first_path
+    def __init__(self, paths: int, lags: Sequence[int] = MEMORY_LAGS, first_path: int = 0, paired: bool = True):
+        self.first_path, self.paired = first_path, paired
         self.scores, self.clusters = Window(max(lags), paths), Window(max(CLUSTER_LAGS), paths)
         self.totals = np.zeros((FIRST_LAG + len(lags) + len(CLUSTER_LAGS), paths))
         memory, cluster = (len(each) for each in (MEMORY_LAGS, CLUSTER_LAGS))
@@ -130,8 +131,8 @@ class ShockSums:
     def stretched(self) -> NDArray:
         return self.stretches.sums
 
-    def lane(self, paths: int, first_path: int = 0) -> ShockLane:
-        return ShockLane(paths, self.lags, first_path)
+    def lane(self, paths: int, first_path: int = 0, paired: bool = True) -> ShockLane:
+        return ShockLane(paths, self.lags, first_path, paired)
 
     def absorb(self, z: NDArray, first_step: int, lane: ShockLane, x: NDArray | None = None) -> None:
         """Add the shocks of a tile, NaN where there is none, of the values x."""
@@ -181,11 +182,11 @@ class ShockSums:
         g = lane.view[len(lane.view) - steps :]
         worst, profile, blocks = np.empty(steps, np.int64), np.empty((2, steps)), np.empty((steps // BLOCK, paths))
         squares = self.stretches.takes(first_step, lane.stretches)
+        kept = BLOCK if lane.paired else max(CLUSTER_LAGS)
         in_one_pass(
-            "strips", lane.view, lane.sizes, steps, pieces(), CELLS_OF_SD, self.counts, worst, lane.totals, lane.places,
-            lane.beside, profile, scratch(2 * BLOCK, -(-paths // STRIP), 1).reshape(2, BLOCK, -1),
-            np.empty((2, paths)) if squares is None else squares, blocks, room(ROOM),
-            module="strips",
+            "strips", lane.view, lane.sizes, steps, kept, pieces(), CELLS_OF_SD, self.counts, worst, lane.totals,
+            lane.places, lane.beside, profile, scratch(2 * BLOCK, -(-paths // STRIP), 1).reshape(2, BLOCK, -1),
+            np.empty((2, paths)) if squares is None else squares, blocks, room(ROOM), module="strips",
         )  # fmt: skip
         for i, lag in enumerate(self.lags[len(MEMORY_LAGS) :], FIRST_LAG + len(MEMORY_LAGS)):
             add_lagged(lane.totals[i], lane.view, lane.view, lag, steps)
