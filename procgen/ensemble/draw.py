@@ -11,6 +11,7 @@ from procgen.ensemble.columns import Column
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.plan import CACHED, TILE, Block, lanes, tiles
 from procgen.ensemble.source import Run, Source
+from procgen.terms.hands import each
 
 Tick = Callable[[int], None]  # called with the rows just drawn; may raise to stop the work
 State = dict[str, np.ndarray]
@@ -54,11 +55,11 @@ class Drawer:
             with np.errstate(all="ignore"):  # what is not finite is refused below, with its place
                 tile = run.tile(steps)
             start = step - block.first_step
-            for column in self.source.columns:
-                values = tile[column.name]
-                infinite, unknown = turn(values, out[column.name], start)
+            columns = self.source.columns
+            odd = each(lambda column: turn(tile[column.name], out[column.name], start), columns)
+            for column, (infinite, unknown) in zip(columns, odd, strict=True):
                 if infinite or (unknown and not column.gaps):
-                    raise _not_finite(column, values, block.first_path, step)
+                    raise _not_finite(column, tile[column.name], block.first_path, step)
             step += steps
             self.tick(block.paths * steps)
 
