@@ -16,14 +16,14 @@ import numpy as np
 from procgen.chance import kernel
 from procgen.ensemble import digest
 from procgen.ensemble.columns import Column, as_kept, store
-from procgen.ensemble.draw import Drawer, Tick, empty
+from procgen.ensemble.draw import Drawer, Tick, empty, together
 from procgen.ensemble.files import writing
 from procgen.ensemble.layouts import Layout
 from procgen.ensemble.places import place_of
 from procgen.ensemble.plan import Block, Chain, batches, narrow_steps
 from procgen.ensemble.source import FACTORY, Source, open_source
 from procgen.ensemble.store import Folder
-from procgen.terms.hands import each, hands
+from procgen.terms.hands import done, each, hands
 
 
 @dataclass(frozen=True)
@@ -122,12 +122,13 @@ def _render_part(task: Task, part: Block, source: Source, drawer: Drawer, folder
     with writing(folder, name, part, layout, columns, source.stamps, task.identity) as writer:
         for batch in batches(part, row_bytes(columns), task.chain[0].steps):
             if not buffers or buffers[columns[0].name].shape != (batch.paths, batch.steps):
-                buffers = empty(batch, columns)
+                buffers = together(batch, columns)
             drawer.fill(batch, buffers)
             with kernel.compiling(drawer.compile or kernel.is_compiling()):
-                kept = each(lambda column: store(buffers[column.name], column), columns)
+                kept = each(done, [partial(store, buffers[column.name], column) for column in columns])
             stored = {column.name: values for column, values in zip(columns, kept, strict=True)}
-            each(lambda do: do(), [lambda: writer.write(batch, stored), *digests.adding(batch, buffers, stored)])
+            calls: list[Callable[[], None]] = [partial(writer.write, batch, stored)]
+            each(done, calls + digests.adding(batch, buffers, stored))
             if last and batch.end_step == part.end_step:
                 drawer.forget(batch)
         writer.nodes = digests.packed(task.whole)

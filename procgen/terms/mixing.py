@@ -5,7 +5,7 @@ Everything here makes values: only portable operations (see `procgen.chance.port
 
 from __future__ import annotations
 
-from collections.abc import Hashable, Iterator, Sequence
+from collections.abc import Callable, Hashable, Iterator
 from dataclasses import dataclass
 from functools import cached_property
 from itertools import pairwise
@@ -67,33 +67,41 @@ class Group:
         weights = tuple([tuple([float(row[j]) for j in used]) for row in rows])
         return tuple([self.sources[j] for j in used]), (weights, self.df)
 
-    def shocks(self, uniforms: Sequence[Array], states: Array | None = None) -> list[Array]:
-        """Shocks of every source from uniforms of its own, and the number of the state, each (steps, paths)."""
-        if self.df is None:
-            own = np.empty((len(uniforms), *uniforms[0].shape))
-            each(lambda k: NORMAL.shocks(uniforms[k], out=own[k]), range(len(own)))
-            normals = self._weighed(own, states)
-        else:
-            tied = self._weighed(student_copula.spherical(self.df, uniforms), states)
-            normals = [tied[0], *(student_copula.normals(self.df, x) for x in tied[1:])]
-        return each(lambda k: self._shocks(k, uniforms[k], normals[k]), range(len(normals)))
+    def shocks(
+        self, fill: Callable[[int, Array], object], shape: tuple[int, ...], states: Array | None = None
+    ) -> list[Array]:
+        """Shocks of every source, each of this shape (steps, paths); states: the number of the state, so, too.
 
-    def _shocks(self, place: int, uniforms: Array, normals: Array) -> Array:
-        """Shocks of one source from its normals; those of a leader come straight from its uniforms.
-
-        So being named moves nothing. The normals may be given back themselves.
+        fill : puts the uniforms of the source in a place into an array
         """
-        law, leads = self.sources[place].law, self._leading[place]
-        if isinstance(law, Normal) and (self.df is None or not leads):
-            return normals
-        return law.shocks(uniforms) if leads else law.shocks_from_normals(normals)
+        rows = np.empty((len(self.sources), *shape))
+        made: dict[int, Array] = {}
+        laws = [source.law for source in self.sources]
+
+        def draw(place: int) -> None:
+            fill(place, rows[place])
+            if self._leading[place] and not (self.df is None and isinstance(laws[place], Normal)):
+                # straight from its uniforms, so that being named moves nothing
+                made[place] = laws[place].shocks(rows[place])
+            if self.df is None:
+                NORMAL.shocks(rows[place], out=rows[place])
+
+        each(draw, range(len(rows)))
+        if self.df is None:
+            normals = self._weighed(rows, states)
+        else:
+            tied = self._weighed(student_copula.spherical(self.df, rows), states)
+            normals = [tied[0], *(student_copula.normals(self.df, x) for x in tied[1:])]
+        left = [k for k, law in enumerate(laws) if k not in made and not isinstance(law, Normal)]
+        made |= zip(left, each(lambda k: laws[k].shocks_from_normals(normals[k]), left), strict=True)
+        return [made.get(k, z) for k, z in enumerate(normals)]
 
     @cached_property
     def _leading(self) -> list[bool]:
         """Of each source, whether its shocks are its own alone."""
         return [len(self.made_from(place)[0]) == 1 for place in range(len(self.sources))]
 
-    def _weighed(self, vectors: Sequence[Array] | Array, states: Array | None) -> Sequence[Array]:
+    def _weighed(self, vectors: Any, states: Array | None) -> Any:
         """Each row of the factor times the vectors, added in order; what is zero in every state is passed over."""
         if states is None and isinstance(vectors, np.ndarray) and is_compiling():
             return mixed_in_place(self.factors[0], vectors)

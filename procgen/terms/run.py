@@ -139,10 +139,10 @@ class Run:
                 values[id(member)] = z
 
     def _mixed(self, group: Group, first_step: int, steps: int, states: Array | None) -> list[Array]:
-        uniforms = each(
-            lambda source: source.stream.uniforms(self.first_path, self.paths, first_step, steps), group.sources
-        )
-        return group.shocks(uniforms, None if states is None else states[len(states) - steps :])
+        def fill(place: int, rows: Array) -> None:
+            group.sources[place].stream.uniforms(self.first_path, self.paths, first_step, steps, out=rows)
+
+        return group.shocks(fill, (steps, self.paths), None if states is None else states[len(states) - steps :])
 
     # before step 0
 
