@@ -1,7 +1,8 @@
 """A process that is ours: of a command, or a worker. A caller's process is left as it is.
 
-It ends without taking apart what it has made (`leave`). Python looks for garbage in cycles each time some hundred objects more have been made. Imports make 100,000 that stay,
-and values are no such objects; to look at all of them again and again took a twentieth of the processor time.
+It ends without taking apart what it has made (`leave`). Python looks for garbage in cycles each time some hundred
+objects more have been made. Imports make 100,000 that stay, and values are no such objects; to look at all of them
+again and again took a twentieth of the processor time.
 """
 
 from __future__ import annotations
