@@ -165,6 +165,10 @@ class Window:
             self._make_room(count)
         return self._rows[self._end : self._end + count]
 
+    def newest(self, count: int) -> NDArray:
+        """The last `count` rows, which have all been pushed since there was last room made."""
+        return self._rows[self._end - count : self._end]
+
     def push(self, rows: NDArray) -> NDArray:
         """The held rows followed by the new ones; a view that lives until the next push."""
         view = self.room(len(rows))

@@ -135,9 +135,26 @@ class ShockSums:
         return ShockLane(paths, self.lags, first_path, paired)
 
     def absorb(self, z: NDArray, first_step: int, lane: ShockLane, x: NDArray | None = None) -> None:
-        """Add the shocks of a tile, NaN where there is none, of the values x."""
-        lane._earlier = None
-        whole, offset = _all_known(z), 0
+        """Add the shocks of a tile, NaN where there is none, of the values x.
+
+        Where the first of a path are unknown, as those of a variance that begins anywhere, the rest goes at once.
+        """
+        whole = _all_known(z)
+        cut = 0 if whole or not is_compiling() else _known_from(z)
+        if not 0 < cut < len(z):
+            self._absorb(z, first_step, lane, x, whole)
+            return
+        z, x = z.copy(), z if x is None else x  # it may be of the window, where the first shocks of all are moved up
+        windows = lane.scores, lane.clusters
+        for window in windows:
+            window.next(len(z))  # so that both parts will lie one behind the other
+        self._absorb(z[:cut], first_step, lane, x[:cut], False)
+        seen = len(lane.view), len(lane.sizes)
+        self._absorb(z[cut:], first_step + cut, lane, x[cut:], True)
+        lane.view, lane.sizes = (window.newest(n + len(z) - cut) for window, n in zip(windows, seen, strict=True))
+
+    def _absorb(self, z: NDArray, first_step: int, lane: ShockLane, x: NDArray | None, whole: bool) -> None:
+        lane._earlier, offset = None, 0
         known = z if whole else np.isfinite(z)
         if not whole and not lane.scores.held:  # nothing is carried so far: it begins with the first shock
             offset = int(np.argmax(known.any(axis=1)))
@@ -222,7 +239,7 @@ class ShockSums:
         self.asymmetry[0] += paths * min(steps, len(lane.view) - 1)
         self._add_profile(np.full(steps, float(paths)), profile, first_step)
         if paths > 1:
-            self.rows[min(paths, GROUP)] += steps * -(-paths // GROUP)
+            self.rows.update(_all_runs(steps, paths))
         self.far = farthest.farthest(g, z, x, lane.first_path, first_step, self.far, worst, self.least)
         if blocks is None:
             self.stretches.absorb(g, first_step, lane.stretches)
@@ -257,7 +274,7 @@ class ShockSums:
         self._add_profile(counts, (across(g), across(square)), first_step)
         if paths > 1:
             add_products(lane.beside, g[:, 1:], g[:, :-1], offset)
-            self.rows.update({min(paths, GROUP): len(g) * -(-paths // GROUP)} if whole else _runs(known))
+            self.rows.update(_all_runs(len(g), paths) if whole else _runs(known))
 
     def _add_profile(self, counts: NDArray, sums: Sequence[NDArray] | NDArray, first_step: int) -> None:
         """Add what is known of each step of a tile, one step after another."""
@@ -322,6 +339,12 @@ def _all_known(z: NDArray) -> bool:
     return (z.flags.c_contiguous and math.isfinite(np.dot(z.ravel(), z.ravel()))) or bool(np.isfinite(z).all())
 
 
+def _known_from(z: NDArray) -> int:
+    """The first row of a block from which on all of a tile is known."""
+    unknown = np.flatnonzero(~np.isfinite(z).all(axis=1))
+    return -(-(int(unknown[-1]) + 1) // BLOCK) * BLOCK if unknown.size else 0
+
+
 def _pairs(view: NDArray, lags: Sequence[int], steps: int) -> NDArray | int:
     """How many pairs of known scores each path has at these lags in the last `steps` of a view."""
     if len(view) - steps >= max(lags):
@@ -362,6 +385,11 @@ def _runs(known: NDArray) -> dict[int, int]:
     edges = np.flatnonzero(np.diff(padded.ravel(), prepend=0))
     lengths, counts = np.unique(edges[1::2] - edges[::2], return_counts=True)
     return dict(zip(lengths.tolist(), counts.tolist(), strict=True))
+
+
+def _all_runs(steps: int, paths: int) -> dict[int, int]:
+    """The same where all of so many paths are known: whole lane groups, and what is left of one."""
+    return {length: steps * times for length, times in ((GROUP, paths // GROUP), (paths % GROUP, 1)) if length * times}
 
 
 NEAR = (-2, -1, 0, 1, 2)  # lags at which two series are compared
