@@ -8,6 +8,7 @@ from typing import Annotated, Any
 from procgen.console import guarded, printed, progress, run, said
 from procgen.declared import Argument, Option, command, fault
 from procgen.difference_command import HELP, difference
+from procgen.ensemble.own import leave
 from procgen.export_command import EXAMPLES, Columns, export
 from procgen.options import (
     Expect,
@@ -345,5 +346,10 @@ command("difference", **HELP)(difference)
 
 
 def main() -> None:
-    """Run the command line of this process."""
-    run()
+    """Run the command line of this process, and end it."""
+    try:
+        run()
+    except SystemExit as ended:
+        if ended.code is None or isinstance(ended.code, int):
+            leave(ended.code or 0)
+        raise

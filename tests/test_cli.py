@@ -107,7 +107,7 @@ def test_the_version_is_that_of_the_package():
 
 def test_help_imports_nothing_heavy():
     code = (
-        "import sys\nfrom procgen.cli import main\nsys.argv = ['procgen', '-h']\n"
+        "import sys\nfrom procgen.cli import run as main\nsys.argv = ['procgen', '-h']\n"
         "try:\n    main()\nexcept SystemExit:\n    pass\n"
         "heavy = {'numpy', 'scipy', 'pandas', 'pyarrow', 'yaml', 'rich', 'numba'} & set(sys.modules)\n"
         "print(sorted(heavy), file=sys.stderr)"

@@ -146,7 +146,7 @@ def test_a_render_imports_nothing_that_reads_command_lines(tmp_path):
     spec = tmp_path / "a.yaml"
     spec.write_text("procgen: 1\nseed: 1\npaths: 2\ntime: {steps: 3}\nseries: {x: [{white_noise: {sd: 1}}]}\n")
     code = (
-        "import sys\nfrom procgen.cli import main\n"
+        "import sys\nfrom procgen.cli import run as main\n"
         f"sys.argv = ['procgen', 'render', {str(spec)!r}, '-o', {str(tmp_path / 'out')!r}]\n"
         "try:\n    main()\nexcept SystemExit as end:\n    assert end.code == 0\n"
         "print(sorted({'typer', 'pydantic', 'click', 'argparse', 'scipy', 'pandas', 'numba'} & set(sys.modules)))"

@@ -116,6 +116,10 @@ class Cluster:
         """Threads of the cluster: tasks that it can work on at once."""
         return max(sum(self.client.ncores().values()), 1)
 
+    def hands(self, tasks: int) -> int:
+        """One: the other threads of a worker are for other tasks."""
+        return 1
+
     def check_versions(self) -> None:
         """Refuse workers that would draw or write other values than this process."""
         ours = versions()

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
+from functools import partial
 
 import numpy as np
 
@@ -11,6 +12,7 @@ from procgen.ensemble.columns import Column
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.plan import CACHED, TILE, Block, lanes, tiles
 from procgen.ensemble.source import Run, Source
+from procgen.terms.hands import done, each
 
 Tick = Callable[[int], None]  # called with the rows just drawn; may raise to stop the work
 State = dict[str, np.ndarray]
@@ -54,11 +56,11 @@ class Drawer:
             with np.errstate(all="ignore"):  # what is not finite is refused below, with its place
                 tile = run.tile(steps)
             start = step - block.first_step
-            for column in self.source.columns:
-                values = tile[column.name]
-                infinite, unknown = turn(values, out[column.name], start)
+            columns = self.source.columns
+            turning = [partial(turn, tile[column.name], out[column.name], start) for column in columns]
+            for column, (infinite, unknown) in zip(columns, each(done, turning), strict=True):
                 if infinite or (unknown and not column.gaps):
-                    raise _not_finite(column, values, block.first_path, step)
+                    raise _not_finite(column, tile[column.name], block.first_path, step)
             step += steps
             self.tick(block.paths * steps)
 
@@ -144,3 +146,9 @@ def _not_finite(column: Column, values: np.ndarray, first_path: int, first_step:
 def empty(block: Block, columns: list[Column]) -> dict[str, np.ndarray]:
     """Arrays (paths, steps) float64 to draw a block into."""
     return {column.name: np.empty((block.paths, block.steps)) for column in columns}
+
+
+def together(block: Block, columns: list[Column]) -> dict[str, np.ndarray]:
+    """The same as `empty` in one piece of memory, which systems give in large pages where it is large."""
+    memory = np.empty((len(columns), block.paths, block.steps))
+    return {column.name: memory[k] for k, column in enumerate(columns)}

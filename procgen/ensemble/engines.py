@@ -151,6 +151,9 @@ class Engine(Protocol):
     def size(self) -> int:
         """Tasks that are worked on at once."""
 
+    def hands(self, tasks: int) -> int:
+        """Threads for each of so many tasks, where there are fewer of them than could be worked on at once."""
+
     def check_sees(self, folder: str) -> None:
         """Raise EnsembleError when a worker does not see the folder."""
 
@@ -169,6 +172,9 @@ class Here:
     size: int
     inherit: int | None = None
     advice: str = FEWER
+
+    def hands(self, tasks: int) -> int:
+        return max(self.size // max(tasks, 1), 1)
 
     def check_sees(self, folder: str) -> None:
         """Nothing to check: it is one machine."""

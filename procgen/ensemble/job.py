@@ -260,12 +260,15 @@ class Job:
         self.present.write_plan(plan, self.columns)
         self.folder.remove([MANIFEST])
 
-        tasks, records = [], []
+        left, records = [], []
         for chain in plan:
             start = next((k for k, part in enumerate(chain) if part not in there), len(chain))
             records += [there[part] for part in chain[:start]]
             if start < len(chain):
-                tasks.append(self._task(chain, start, self.whole.rows * len(self.columns) // engine.size))
+                left.append((chain, start))
+        hands = engine.hands(len(left))
+        share = self.whole.rows * len(self.columns) // engine.size * hands
+        tasks = [self._task(chain, start, share, hands) for chain, start in left]
         done = sum(Block(**record["part"]).rows for record in records)
         todo = [task.json() for task in tasks]
         engine.run(Work(todo, WORK, records.extend, progress, done, self.whole.rows, get_ready))
@@ -276,9 +279,9 @@ class Job:
         self.folder.clean_state(keep_plan=False)
         return made
 
-    def _task(self, chain: Chain, start: int, share: int) -> Task:
+    def _task(self, chain: Chain, start: int, share: int, hands: int) -> Task:
         out, types = address(self.folder.path), {column.name: column.type for column in self.columns}
-        told = self.reveal, self.factory, types, share
+        told = self.reveal, self.factory, types, share, hands
         return Task(self.spec.raw, self.identity, out, self.whole, chain, start, *told)
 
     def _refuse_too_large(self) -> None:

@@ -1,12 +1,17 @@
 """A process that is ours: of a command, or a worker. A caller's process is left as it is.
 
-Python looks for garbage in cycles each time some hundred objects more have been made. Imports make 100,000 that stay,
-and values are no such objects; to look at all of them again and again took a twentieth of the processor time.
+It ends without taking apart what it has made (`leave`). Python looks for garbage in cycles each time some hundred
+objects more have been made. Imports make 100,000 that stay, and values are no such objects; to look at all of them
+again and again took a twentieth of the processor time.
 """
 
 from __future__ import annotations
 
+import atexit
 import gc
+import os
+import sys
+import threading
 
 STARTING = 250_000  # objects: more than imports and a plan make
 WORKING = 20_000  # objects since `settled`, which are few and soon looked through
@@ -33,3 +38,20 @@ def settled() -> None:
         _settled = True
         gc.freeze()
         gc.set_threshold(WORKING, *gc.get_threshold()[1:])
+
+
+def leave(code: int) -> None:
+    """End this process of ours: the system takes back all at once what Python would let go of one by one.
+
+    That takes 20 ms, a tenth of a small command. It returns where that is Python's to do: beside other threads, or
+    where something that was said cannot be written.
+    """
+    if not _own or threading.active_count() > 1:
+        return
+    atexit._run_exitfuncs()
+    try:
+        sys.stdout.flush()
+        sys.stderr.flush()
+    except (OSError, ValueError):
+        return
+    os._exit(code)

@@ -6,8 +6,9 @@ it anywhere. Running it twice, even at once, gives the same files.
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import asdict, dataclass, field
+from functools import partial
 from typing import Any
 
 import numpy as np
@@ -15,13 +16,14 @@ import numpy as np
 from procgen.chance import kernel
 from procgen.ensemble import digest
 from procgen.ensemble.columns import Column, as_kept, store
-from procgen.ensemble.draw import Drawer, Tick, empty
+from procgen.ensemble.draw import Drawer, Tick, empty, together
 from procgen.ensemble.files import writing
 from procgen.ensemble.layouts import Layout
 from procgen.ensemble.places import place_of
 from procgen.ensemble.plan import Block, Chain, batches, narrow_steps
 from procgen.ensemble.source import FACTORY, Source, open_source
 from procgen.ensemble.store import Folder
+from procgen.terms.hands import done, each, hands
 
 
 @dataclass(frozen=True)
@@ -38,6 +40,7 @@ class Task:
     factory: str = FACTORY
     types: Mapping[str, str] = field(default_factory=dict)  # of the columns that are there already, by name
     share: int = 0  # values that a process may expect to draw, of all tasks
+    hands: int = 1  # threads that this chain may take
 
     def json(self) -> dict[str, Any]:
         """The task as data; what tasks have in common is shared, not copied."""
@@ -80,13 +83,14 @@ def render_chain(task: Task, tick: Tick = lambda rows: None) -> list[dict[str, A
     narrow = narrow_steps(task.chain, row_bytes(source.columns), source.depth)
     drawer = Drawer(source, tick, narrow, task.share)
     records = []
-    for number in range(_take_up(task, folder, drawer), len(task.chain)):
-        if number < task.start:
-            _pass_over(task, task.chain[number], source, drawer)
-            continue
-        records.append(_render_part(task, task.chain[number], source, drawer, folder))
-        if number:
-            folder.drop_state(task.chain[number - 1].file(task.whole))
+    with hands(task.hands if drawer.compile else 1):  # what the interpreter does goes one by one
+        for number in range(_take_up(task, folder, drawer), len(task.chain)):
+            if number < task.start:
+                _pass_over(task, task.chain[number], source, drawer)
+                continue
+            records.append(_render_part(task, task.chain[number], source, drawer, folder))
+            if number:
+                folder.drop_state(task.chain[number - 1].file(task.whole))
     return records
 
 
@@ -118,12 +122,13 @@ def _render_part(task: Task, part: Block, source: Source, drawer: Drawer, folder
     with writing(folder, name, part, layout, columns, source.stamps, task.identity) as writer:
         for batch in batches(part, row_bytes(columns), task.chain[0].steps):
             if not buffers or buffers[columns[0].name].shape != (batch.paths, batch.steps):
-                buffers = empty(batch, columns)
+                buffers = together(batch, columns)
             drawer.fill(batch, buffers)
             with kernel.compiling(drawer.compile or kernel.is_compiling()):
-                stored = {column.name: store(buffers[column.name], column) for column in columns}
-            digests.add(batch, buffers, stored)
-            writer.write(batch, stored)
+                kept = each(done, [partial(store, buffers[column.name], column) for column in columns])
+            stored = {column.name: values for column, values in zip(columns, kept, strict=True)}
+            calls: list[Callable[[], None]] = [partial(writer.write, batch, stored)]
+            each(done, calls + digests.adding(batch, buffers, stored))
             if last and batch.end_step == part.end_step:
                 drawer.forget(batch)
         writer.nodes = digests.packed(task.whole)
@@ -141,11 +146,14 @@ class Digests:
         self.stored = {column.name: digest.Leaves(part) for column in columns}
         self.drawn = {column.name: digest.Leaves(part) for column in columns if not column.exact}
 
-    def add(self, batch: Block, drawn: Mapping[str, np.ndarray], stored: Mapping[str, np.ndarray]) -> None:
-        for name, leaves in self.stored.items():
-            leaves.add(batch.first_path, batch.first_step, stored[name])
-        for name, leaves in self.drawn.items():
-            leaves.add(batch.first_path, batch.first_step, drawn[name])
+    def adding(
+        self, batch: Block, drawn: Mapping[str, np.ndarray], stored: Mapping[str, np.ndarray]
+    ) -> list[Callable[[], None]]:
+        """What is to be done with a batch, column by column, in any order."""
+        first = batch.first_path, batch.first_step
+        to_do = [*((each, stored[name]) for name, each in self.stored.items())]
+        to_do += [(each, drawn[name]) for name, each in self.drawn.items()]
+        return [partial(leaves.add, *first, values) for leaves, values in to_do]
 
     def packed(self, whole: Block) -> dict[str, dict[str, str]]:
         """Nodes as hex by column; `drawn` is given only where it differs from `stored`."""

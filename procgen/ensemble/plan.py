@@ -17,6 +17,7 @@ STEPS = 65_536  # steps in one leaf of the digest
 PART_BYTES = 64 << 20
 MOST_PARTS = 20_000  # of usual size; beyond, parts grow, so that a manifest and a scheduler can hold them
 BUFFER_BYTES = 128 << 20
+ALONE_BYTES = 32 << 20  # of one path, of which more at once saves nothing, and memory must be had first
 GROUP_ROWS = 1 << 20
 TILE = 1 << 18
 CACHED = 1 << 16  # values of a tile that stays in the processor's cache; each tile costs 0.1 ms in the interpreter
@@ -166,7 +167,7 @@ def batches(part: Block, row_bytes: int, longest: int | None = None) -> Iterator
     is the number of steps of the longest part of the chain.
     """
     steps = longest or part.steps
-    limit = max(BUFFER_BYTES // row_bytes, 1)
+    limit = max((ALONE_BYTES if part.paths == 1 else BUFFER_BYTES) // row_bytes, 1)
     yield from cut(part, min(max(GROUP_ROWS, min(part.paths, NARROW) * steps), limit), steps)
 
 

@@ -5,22 +5,26 @@ Everything here makes values: only portable operations (see `procgen.chance.port
 
 from __future__ import annotations
 
-from collections.abc import Hashable, Iterator, Sequence
+from collections.abc import Callable, Hashable, Iterator
 from dataclasses import dataclass
 from functools import cached_property
+from itertools import pairwise
 from typing import Any
 
 import numpy as np
 
 from procgen.chance import student_copula
+from procgen.chance.kernel import is_compiling, machine
 from procgen.chance.laws import Normal
 from procgen.chance.portable import cholesky
 from procgen.spec.model import Fault, Following, SpecError
 from procgen.terms.base import Array
 from procgen.terms.combine import Scaled
+from procgen.terms.hands import at_hand, each
 from procgen.terms.start import weigh
 
 NORMAL = Normal()
+AT_ONCE = 512  # values of each row that are mixed at a time, which stay in the nearest cache
 
 
 @dataclass(eq=False)
@@ -63,22 +67,44 @@ class Group:
         weights = tuple([tuple([float(row[j]) for j in used]) for row in rows])
         return tuple([self.sources[j] for j in used]), (weights, self.df)
 
-    def shocks(self, uniforms: Sequence[Array], states: Array | None = None) -> list[Array]:
-        """Shocks of every source from uniforms of its own, and the number of the state, each (steps, paths)."""
-        if self.df is None:
-            normals = self._weighed([NORMAL.shocks(u) for u in uniforms], states)
-        else:
-            mixed = self._weighed(student_copula.spherical(self.df, uniforms), states)
-            normals = [mixed[0], *(student_copula.normals(self.df, x) for x in mixed[1:])]
-        # A leader's shocks come straight from its uniforms, so that being named moves nothing.
-        leads = [len(self.made_from(i)[0]) == 1 for i in range(len(normals))]
-        return [
-            s.law.shocks(u) if lead else s.law.shocks_from_normals(z)
-            for s, u, z, lead in zip(self.sources, uniforms, normals, leads, strict=True)
-        ]
+    def shocks(
+        self, fill: Callable[[int, Array], object], shape: tuple[int, ...], states: Array | None = None
+    ) -> list[Array]:
+        """Shocks of every source, each of this shape (steps, paths); states: the number of the state, so, too.
 
-    def _weighed(self, vectors: Sequence[Array], states: Array | None) -> list[Array]:
+        fill : puts the uniforms of the source in a place into an array
+        """
+        rows = np.empty((len(self.sources), *shape))
+        made: dict[int, Array] = {}
+        laws = [source.law for source in self.sources]
+
+        def draw(place: int) -> None:
+            fill(place, rows[place])
+            if self._leading[place] and not (self.df is None and isinstance(laws[place], Normal)):
+                # straight from its uniforms, so that being named moves nothing
+                made[place] = laws[place].shocks(rows[place])
+            if self.df is None:
+                NORMAL.shocks(rows[place], out=rows[place])
+
+        each(draw, range(len(rows)))
+        if self.df is None:
+            normals = self._weighed(rows, states)
+        else:
+            tied = self._weighed(student_copula.spherical(self.df, rows), states)
+            normals = [tied[0], *(student_copula.normals(self.df, x) for x in tied[1:])]
+        left = [k for k, law in enumerate(laws) if k not in made and not isinstance(law, Normal)]
+        made |= zip(left, each(lambda k: laws[k].shocks_from_normals(normals[k]), left), strict=True)
+        return [made.get(k, z) for k, z in enumerate(normals)]
+
+    @cached_property
+    def _leading(self) -> list[bool]:
+        """Of each source, whether its shocks are its own alone."""
+        return [len(self.made_from(place)[0]) == 1 for place in range(len(self.sources))]
+
+    def _weighed(self, vectors: Any, states: Array | None) -> Any:
         """Each row of the factor times the vectors, added in order; what is zero in every state is passed over."""
+        if states is None and isinstance(vectors, np.ndarray) and is_compiling():
+            return mixed_in_place(self.factors[0], vectors)
         if states is None:
             return weigh(self.factors[0], vectors)
         state, out = states.astype(np.int64), []
@@ -91,6 +117,39 @@ class Group:
                     total = part if total is None else total + part
             out.append(vector if total is None else total)
         return out
+
+
+def mixed_in_place(factor: Array, rows: Array) -> Array:
+    """The rows Σ_j factor[i, j]·rows[j] of a lower factor in the place of `rows`, compiled; the bits of `weigh`."""
+    flat = rows.reshape(len(rows), -1)
+    cuts = [flat.shape[1] * k // at_hand() for k in range(at_hand() + 1)]
+    run = machine("mixing", "mixed", "procgen.terms")
+    each(lambda part: run(factor, flat, *part, np.empty(AT_ONCE)), [*pairwise(cuts)])
+    return rows
+
+
+def mixed(factor, rows, begin, end, at_once):
+    """Put Σ_j factor[i, j]·rows[j], j ≤ i, in the place of rows[i] from `begin` to `end`; exact zeros are passed over.
+
+    From the last row on, so that those it needs are still there; added in order, in a room that stays in the cache.
+    """
+    for first in range(begin, end, at_once.shape[0]):
+        last = min(first + at_once.shape[0], end)
+        total = at_once[: last - first]
+        for i in range(rows.shape[0] - 1, -1, -1):
+            fresh = True
+            for j in range(i + 1):
+                weight, other = factor[i, j], rows[j, first:last]
+                if weight != 0.0 and fresh:
+                    fresh = False
+                    for k in range(total.shape[0]):
+                        total[k] = weight * other[k]
+                elif weight != 0.0:
+                    for k in range(total.shape[0]):
+                        total[k] += weight * other[k]
+            mine = rows[i, first:last]
+            for k in range(total.shape[0]):
+                mine[k] = 0.0 if fresh else total[k]
 
 
 def followed(node: Any) -> tuple[Any, ...]:

@@ -6,7 +6,7 @@ A `Run` is a pure function of the graph and the range: how its steps are cut int
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping, Sequence
-from functools import partial
+from functools import cached_property, partial
 from typing import Any
 
 import numpy as np
@@ -15,6 +15,7 @@ from procgen.chance.streams import Stream
 from procgen.terms.base import Array, Before, Node, State
 from procgen.terms.combine import Hidden
 from procgen.terms.graph import Graph, Source
+from procgen.terms.hands import at_hand, each
 from procgen.terms.mixing import NORMAL, Group
 
 
@@ -49,7 +50,7 @@ class Run:
             parts = [self.tile(min(most, steps - first)) for first in range(0, steps, most)]
             return {name: np.concatenate([part[name] for part in parts]) for name in self.columns}
         at = np.arange(self.step, self.step + steps)
-        values, self._states = self._advance(self._order, at, self._spent)
+        values = self._tile(at)
         self.step += steps
         shape = (steps, self.paths)
         found = {name: values[id(node)] for name, node in self.columns.items()}
@@ -75,14 +76,35 @@ class Run:
 
     # forward
 
-    def _advance(
-        self, order: Sequence[Any], steps: Array, spent: Mapping[int, Sequence[int]], pace: int = 1
-    ) -> tuple[dict[int, Array], dict[str, State]]:
-        """Values at `steps` of what has this pace, and at as many more of what has a faster one.
-
-        What is `spent` is let go at once: its memory, still in the processor's cache, is had by what comes next.
-        """
+    def _tile(self, steps: Array) -> dict[int, Array]:
+        """Values of all nodes that are not spent, and their new states; strand by strand where threads share them."""
         values: dict[int, Any] = {}
+        ways = self._strands if at_hand() > 1 else [self._order]
+        if len(ways) > 1:
+            self._advance([node for node in self._order if ahead(node)], steps, {}, values=values)
+        found = each(lambda way: self._advance(way, steps, self._spent, values=values)[1], ways)
+        for states in found:
+            self._states = {**self._states, **states}
+        return values
+
+    @cached_property
+    def _strands(self) -> list[list[Any]]:
+        return strands(self._order)
+
+    def _advance(
+        self,
+        order: Sequence[Any],
+        steps: Array,
+        spent: Mapping[int, Sequence[int]],
+        pace: int = 1,
+        values: dict[int, Any] | None = None,
+    ) -> tuple[dict[int, Array], dict[str, State]]:
+        """Values at `steps` of what has this pace, and at as many more of what has a faster one; their new states.
+
+        `values` has what is known already. What is `spent` is let go at once: its memory, still in the processor's
+        cache, is had by what comes next.
+        """
+        values = {} if values is None else values
         hidden: dict[int, dict[str, Array]] = {}
         states: dict[str, State] = {}
         for node in order:
@@ -103,7 +125,7 @@ class Run:
             for part in spent.get(id(node), ()):
                 values.pop(part, None)
                 hidden.pop(part, None)
-        return values, {**self._states, **states}
+        return values, states
 
     def _draw(self, source: Source, first_step: int, steps: int, values: dict[int, Array]) -> None:
         """Shocks of a source, and with it of every source whose normals it is mixed with."""
@@ -117,8 +139,10 @@ class Run:
                 values[id(member)] = z
 
     def _mixed(self, group: Group, first_step: int, steps: int, states: Array | None) -> list[Array]:
-        uniforms = [s.stream.uniforms(self.first_path, self.paths, first_step, steps) for s in group.sources]
-        return group.shocks(uniforms, None if states is None else states[len(states) - steps :])
+        def fill(place: int, rows: Array) -> None:
+            group.sources[place].stream.uniforms(self.first_path, self.paths, first_step, steps, out=rows)
+
+        return group.shocks(fill, (steps, self.paths), None if states is None else states[len(states) - steps :])
 
     # before step 0
 
@@ -215,6 +239,36 @@ def spent(order: Sequence[Any], wanted: Iterable[Any]) -> dict[int, list[int]]:
         if part not in kept:
             found.setdefault(node, []).append(part)
     return found
+
+
+def ahead(node: Any) -> bool:
+    """Whether a source is drawn before all strands: together with others, by what follows nothing."""
+    return isinstance(node, Source) and node.group is not None and node.group.by is None
+
+
+def strands(order: Sequence[Any]) -> list[list[Any]]:
+    """The nodes of an order in parts of which none reads what is in another, each in order.
+
+    Shocks of sources that go together are there before any part is begun, and join none.
+    """
+    belongs: dict[int, int] = {}
+
+    def root(key: int) -> int:
+        while belongs.setdefault(key, key) != key:
+            key = belongs[key]
+        return key
+
+    for node in order:
+        if isinstance(node, Source):
+            read = (*node.group.sources, node.group.by) if node.group is not None and node.group.by is not None else ()
+        else:
+            read = node.inputs
+        for part in read:
+            belongs[root(id(part))] = root(id(node))
+    found: dict[int, list[Any]] = {}
+    for node in order:
+        found.setdefault(root(id(node)), []).append(node)
+    return [*found.values()]
 
 
 def within(steps: Array, times: int) -> Array:

@@ -1,5 +1,6 @@
 """Garbage is looked for less often in a command and its workers, and as ever in a caller's process."""
 
+import os
 import subprocess
 import sys
 
@@ -9,7 +10,7 @@ from tests.ensemble.fakes import ROOT
 
 SPEC = {"procgen": 1, "seed": 3, "paths": 40, "time": {"steps": 50}, "series": {"x": {"ar": {"phi": 0.7, "sd": 1}}}}
 API = f"import procgen as pg\npg.validate(pg.render({SPEC}, sys.argv[1], workers=2), workers=2)"
-COMMAND = "from procgen import cli\nsys.argv[1:] = ['terms']\ntry: cli.main()\nexcept SystemExit: pass"
+COMMAND = "from procgen import cli\nsys.argv[1:] = ['terms']\ntry: cli.run()\nexcept SystemExit: pass"
 CYCLES = """
 from procgen.ensemble import own
 own.claim()
@@ -51,3 +52,23 @@ def test_a_command_does_not_look_for_garbage_while_it_begins(usual):
 
 def test_garbage_of_the_work_is_found_in_time():
     assert said(CYCLES)[0] == "True True"
+
+
+@pytest.mark.parametrize("words, code", [(["terms", "garch"], 0), (["terms", "what"], 2), (["-h"], 0)])
+def test_a_command_ends_at_once_having_said_everything(words, code):
+    """With the exit code, what atexit was asked for, and whole output in a pipe; the process is not asked twice."""
+    script = "import atexit, sys\nfrom procgen import cli\natexit.register(print, 'goodbye')\ncli.main()\nprint('more')"
+    done = subprocess.run([sys.executable, "-c", script, *words], cwd=ROOT, capture_output=True, text=True)
+    plain = subprocess.run(
+        [sys.executable, "-c", script.replace("main", "run"), *words], cwd=ROOT, capture_output=True, text=True
+    )
+    assert done.returncode == plain.returncode == code
+    assert (done.stdout, done.stderr) == (plain.stdout, plain.stderr)
+    assert done.stdout.endswith("goodbye\n") and "more" not in done.stdout
+
+
+def test_what_cannot_be_written_is_told_by_python():
+    script = "import os\nfrom procgen.ensemble import own\nown.claim()\nprint('x')\nos.close(1)\nown.leave(0)"
+    buffered = {name: value for name, value in os.environ.items() if name != "PYTHONUNBUFFERED"}
+    done = subprocess.run([sys.executable, "-c", script], cwd=ROOT, capture_output=True, text=True, env=buffered)
+    assert done.returncode == 120 and "Bad file descriptor" in done.stderr

@@ -72,7 +72,7 @@ class Render:
             os.dup2(target, stream)
         sys.argv = ["procgen", "render", *arguments, *["--resume"] * resume]
         try:
-            cli.main()
+            cli.run()
         except SystemExit as ended:
             sys.stderr.flush()
             return int(ended.code or 0)
