@@ -18,6 +18,7 @@ from procgen.checks import power, tails
 FEW_PATHS = 100  # below this many paths no central limit theorem over paths is trusted
 _PLACES = tuple(4.0 * 1.05**k for k in range(40))  # standard errors, at which a tail that falls is made sure of
 _TRUSTED = 0.5  # the largest relative error of a tail (as a logarithm) that still counts as known
+_STEADY = 3.0  # times the skewness of a sample that samples which depart were seen to have (tests/studies/power.py)
 
 
 def _always(level: float) -> str | None:
@@ -35,7 +36,7 @@ class Finding:
     log_p : float
         Natural logarithm of p.
     detect : callable
-        Level -> smallest departure found 9 times in 10, in the unit of the estimate (None: not known).
+        Level -> smallest departure found 9 times in 10, in the unit of the estimate (None: none can be promised).
     doubt : callable
         Level -> why p cannot be trusted that far out, or None.
     """
@@ -55,9 +56,7 @@ def unit(z: float, error: float, theory: float = 0.0, skew: float = 0.0, excess:
     """
     more = max(excess - 1.5 * skew * skew, 0.0)
     log_p = min(0.0, _falling(lambda x: tails.two_sided(*tails.pearson3(x, skew)) + tails.lift(x, more), z))
-    return Finding(
-        theory, theory + z * error, error, log_p, lambda level: power.shift(level, error, abs(skew), excess)
-    )
+    return Finding(theory, theory + z * error, error, log_p, lambda level: power.shift(level, error, abs(skew), excess))
 
 
 def normal_mean(off: float, mu: float, sd: float, n: int) -> Finding:
@@ -209,7 +208,9 @@ def _studentised(sample: Sample, theory: float, hidden: float, times: float) -> 
             return f"{n} paths are too few for the skewed tail that a p of {level:.1g} lies in"
         return _few(n)
 
-    def detect(level: float) -> float:
+    def detect(level: float) -> float | None:
+        if _STEADY * gauge * power.needed(level) ** 3 > 1.0:
+            return None  # a sample that departs could be too skewed to be judged
         return error * (power.self_normalised(level, tails.SAFE * gauge) + power.Z_POWER)
 
     return Finding(theory, theory + sample.mean, error, log_p, detect, doubt)
@@ -266,7 +267,12 @@ def with_doubt(finding: Finding, doubt: Callable[[float], str | None]) -> Findin
 def of_scale(finding: Finding) -> Finding:
     """The finding of a spread, whose estimate is the less certain the larger it is."""
     error, theory, plain = finding.standard_error, finding.theory, finding.detect
-    return replace(finding, detect=lambda level: power.of_scale(plain(level) or math.inf, error, theory))
+
+    def detect(level: float) -> float | None:
+        shift = plain(level)
+        return None if shift is None else power.of_scale(shift, error, theory)
+
+    return replace(finding, detect=detect)
 
 
 def reach_of_worst(level: float, n: int) -> float:

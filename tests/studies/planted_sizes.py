@@ -87,16 +87,21 @@ def stay_of(size: float, lag: int, kurtosis: float) -> float:
 # long paths
 
 
-def tied(phi: float = 0.8, mean: float = 4.0) -> list[Any]:
-    """Counts whose intensity has log-variance 0.16: at lag k it has the covariance mean² (exp(0.16 φ^k) − 1)."""
-    return [{"poisson": {"mean": mean / math.exp(0.08), "of": [{"ar": {"phi": phi, "total_sd": 0.4}}]}}]
+def tied(phi: float = 0.8, mean: float = 4.0, sd: float = 0.4) -> list[Any]:
+    """Counts whose intensity has log-sd `sd`: at lag k it has the covariance mean² (exp(sd² φ^k) − 1)."""
+    return [{"poisson": {"mean": mean / math.exp(sd**2 / 2), "of": [{"ar": {"phi": phi, "total_sd": sd}}]}}]
 
 
-def tied_phi(size: float, lag: int) -> float:
-    """The φ at which the slope on the step `lag` earlier is larger by `size`; the variance of a count is 4 + Var m."""
-    variance = 4 + 16 * math.expm1(0.16)
-    slope = 16 * math.expm1(0.16 * 0.8**lag) / variance + size
-    return (math.log1p(slope * variance / 16) / 0.16) ** (1 / lag)
+def tied_phi(size: float, lag: int, mean: float = 4.0, sd: float = 0.4) -> float:
+    """The φ at which the slope on the step `lag` earlier is larger by `size`; the variance is the mean + Var m."""
+    own = mean**2 / (mean + mean**2 * math.expm1(sd**2))
+    slope = own * math.expm1(sd**2 * 0.8**lag) + size
+    return (math.log1p(slope / own) / sd**2) ** (1 / lag)
+
+
+def tied_sd(size: float, mean: float, sd: float) -> float:
+    """The log-sd at which the variance of a count is larger by `size`."""
+    return math.sqrt(math.log1p(math.expm1(sd**2) + size / mean**2))
 
 
 # sizes of neighbours
@@ -162,6 +167,7 @@ def gap_shift(size: float) -> float:
 
 _LEVEL = "parameter x.constant.level: "
 _SPANS = {"shape": (2, 50_000), "whole": True}
+_MANY = 20.0, 0.2  # mean and log-sd of counts that are less skewed
 
 MORE = (
     Plant("shocks: mean", "all steps", regimes(), ranked(lambda d: noise(level=rank_shift(d))),
@@ -179,15 +185,18 @@ MORE = (
     Plant("slope of squares", "lag 1", regimes(8), drawn(lambda d: regimes(stay_of(d, 1, 3.0))),
           by="stays in regimes, normal", shape=(2000, 200)),
     *(Plant("covariance of bounded sizes", f"lag {lag}", short_garch(), lambda d, seed, paths, steps, lag=lag: draw(
-        spec_of(short_garch(garch_alpha(d, lag, steps)), paths, steps, seed)), by="α of a garch", shape=(500, 30))
+        spec_of(short_garch(garch_alpha(d, lag, steps)), paths, steps, seed)), by="α of a garch", shape=(4000, 30))
       for lag in (1, 5)),
     Plant("shocks: level by phase", "period 12", SEASON, drawn(lambda d: [
         *SEASON, {"seasonal": {"period": 2, "harmonics": [{"amplitude": d}]}, "as": "more"}]),
         by="another harmonic", shape=(1, 6000)),
     Plant("mean over steps", "steps 0–63 of", tied(), rendered(lambda d: tied(mean=4 + d)), by="mean of counts",
           **_SPANS),
-    *(Plant("slope over steps", f"steps 0–63, lag {lag} of", tied(), rendered(
-        lambda d, lag=lag: tied(tied_phi(d, lag))), by="φ of an intensity", **_SPANS) for lag in (1, 4)),
+    Plant("variance over steps", "steps 0–63 of", tied(0.8, *_MANY), rendered(
+        lambda d: tied(0.8, 20, tied_sd(d, *_MANY))), by="sd of an intensity", **_SPANS),
+    *(Plant("slope over steps", f"steps 0–63, lag {lag} of", tied(0.8, *_MANY), rendered(
+        lambda d, lag=lag: tied(tied_phi(d, lag, *_MANY), *_MANY)), by="φ of an intensity", **_SPANS)
+      for lag in (1, 4)),
     Plant(f"{_LEVEL}distribution function", "all paths", normal_level(),
           rendered(lambda d: normal_level(gap_shift(d))), "", by="mean of the drawn law", shape=(500, 20), whole=True),
     Plant(f"{_LEVEL}share of 1", "all paths", chosen_level(), rendered(lambda d: chosen_level(0.2 + d)), "",

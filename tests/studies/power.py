@@ -62,8 +62,6 @@ FAT = [{"ar": {"phi": 0.7, "sd": 1}}, {"white_noise": {"sd": 0.5, "law": t(4)}}]
 GARCH = [{"garch": {"omega": 0.05, "alpha": 0.10, "beta": 0.85}}]
 HEAVY = [{"constant": 0}, {"ar": {"phi": 0.6, "total_sd": 1, "law": t(9)}}, {"white_noise": {"sd": 0.5}}]
 COUNTS = [{"poisson": {"mean": 5}}]
-LONE = {"branches": {"a": [{"white_noise": {"sd": 1}}], "b": [{"white_noise": {"sd": 2}, "as": "wide"}]}}
-REGIMES = [{"regimes": {**LONE, "durations": {"a": 4, "b": 4}}}]
 
 
 def heavy(phi: float = 0.6, level: float = 0.0, times: float = 1.0) -> list[Any]:
@@ -243,7 +241,7 @@ PLANTS = (
           by="φ, same variance"),
     Plant("prediction errors: neighbouring paths", "pairs", HEAVY,
           spoilt(HEAVY, lambda x, d, _: _paired(x, d)), by="pairs of paths mixed"),
-    Plant("neighbouring paths", "averages over steps", REGIMES, spoilt(REGIMES, lambda x, d, _: across(x, d)),
+    Plant("neighbouring paths", "averages over steps", LONG, spoilt(LONG, lambda x, d, _: across(x, d)),
           by="paths mixed with their neighbour"),
     Plant("shocks: variance", "all steps", SUM, drawn(lambda d: [
         {"random_walk": {"sd": 0.3 * _wider(1, d)}}, {"ar": {"phi": 0.5, "sd": _wider(1, d)}}]), by="both sd"),
