@@ -18,7 +18,7 @@ from procgen.checks import power, tails
 FEW_PATHS = 100  # below this many paths no central limit theorem over paths is trusted
 _PLACES = tuple(4.0 * 1.05**k for k in range(40))  # standard errors, at which a tail that falls is made sure of
 _TRUSTED = 0.5  # the largest relative error of a tail (as a logarithm) that still counts as known
-_STEADY = 3.0  # times the skewness of a sample that samples which depart were seen to have (tests/studies/power.py)
+_STEADY = 3.0  # times the skewness of products that products which depart were seen to have (tests/studies/power.py)
 
 
 def _always(level: float) -> str | None:
@@ -208,9 +208,7 @@ def _studentised(sample: Sample, theory: float, hidden: float, times: float) -> 
             return f"{n} paths are too few for the skewed tail that a p of {level:.1g} lies in"
         return _few(n)
 
-    def detect(level: float) -> float | None:
-        if _STEADY * gauge * power.needed(level) ** 3 > 1.0:
-            return None  # a sample that departs could be too skewed to be judged
+    def detect(level: float) -> float:
         return error * (power.self_normalised(level, tails.SAFE * gauge) + power.Z_POWER)
 
     return Finding(theory, theory + sample.mean, error, log_p, detect, doubt)
@@ -273,6 +271,15 @@ def of_scale(finding: Finding) -> Finding:
         return None if shift is None else power.of_scale(shift, error, theory)
 
     return replace(finding, detect=detect)
+
+
+def of_products(finding: Finding, sample: Sample, times: float = 1.0) -> Finding:
+    """The finding of a mean product without a known sd: no size is promised where what departs could be too skewed.
+
+    Products of values that follow each other more closely are more skewed than those that were seen.
+    """
+    gauge, plain = _STEADY * times * abs(sample.skew) / (3 * math.sqrt(sample.n)), finding.detect
+    return replace(finding, detect=lambda level: None if gauge * power.needed(level) ** 3 > 1.0 else plain(level))
 
 
 def reach_of_worst(level: float, n: int) -> float:
