@@ -170,11 +170,10 @@ class Watch:
 
     def _compiled(self, x: NDArray) -> None:
         some, paths = np.empty(len(x), dtype=np.int64), x.shape[1]
-        in_one_pass("stays", self.before, x, some)
-        self._follow(x, some)
         room = Marks(*(scratch(1, x.size, 5 + k)[0].view(each.dtype) for k, each in enumerate(self.marks.arrays)))
-        mixed, where, counted = np.empty((3, paths), np.uint64), np.empty(paths, np.int64), np.empty(1, np.int64)
-        in_one_pass("marked", self.before, x, self.ends, _MIX, *room.arrays, mixed, where, counted)
+        mixed, where, counted = np.empty((4, paths), np.uint64), np.empty(paths, np.int64), np.empty(1, np.int64)
+        in_one_pass("marked", self.before, x, self.ends, _MIX, some, *room.arrays, mixed, where, counted)
+        self._follow(x, some)
         count = int(counted[0])
         path, step = self.first_path + room.paths[:count], self.step + room.steps[:count]
         self._keep(Marks(room.hashes[:count].copy(), room.values[:count].copy(), path, step))

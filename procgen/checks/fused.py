@@ -14,7 +14,7 @@ import numpy as np
 from procgen.chance.kernel import compiled_function
 
 BLOCK = 64  # steps, as in `blocks`
-SOME = 64  # paths whose marks are looked for at once
+SOME = 16  # paths whose marks are looked for at once
 _SIZE = np.int64(2**63 - 1)  # all bits of a double but its sign
 _STEEP, _FALL = 6 * np.sqrt(5.0), 0.5 * np.sqrt(5.0)  # of `cluster_scores`
 _part = partial(compiled_function, inline="always")
@@ -257,36 +257,35 @@ def looked(x, weights, prints, low, high, zeros):
         low[t], high[t] = least ^ ((least >> 63) & _SIZE), most ^ ((most >> 63) & _SIZE)
 
 
-def stays(before, x, some):
-    """For each step of x, how many paths have the value of the step before; `before` are the rows before x."""
-    last = before[before.shape[0] - 1]
-    for t in range(x.shape[0]):
-        row, same = x[t], 0
-        for p in range(x.shape[1]):
-            same += row[p] == last[p]
-        some[t] = same
-        last = row
-
-
-def marked(before, x, ends, mix, hashes, values, paths, steps, mixed, where, found_in_all):
+def marked(before, x, ends, mix, some, hashes, values, paths, steps, mixed, where, found_in_all):
     """Fill in the marks of stretches that end in x, and how many there are; `before`: the rows of a stretch before x.
 
-    mixed, where: room for three rows and for one.
+    some: for each step of x, how many paths have the value of the step before. mixed, where: room for four rows and for
+    one.
     """
-    reach, lanes, count = before.shape[0], x.shape[1], 0
+    reach, lanes, count, end_of = before.shape[0], x.shape[1], 0, mixed[3]
     for t in range(-2, x.shape[0]):
-        bits = (x[t] if t >= 0 else before[reach + t]).view(np.uint64)
+        row = x[t] if t >= 0 else before[reach + t]
+        bits, last = row.view(np.uint64), x[t - 1] if t > 0 else before[reach - 1]
         one, two, three = mixed[t % 3], mixed[(t - 1) % 3], mixed[(t - 2) % 3]
+        if t < 0:
+            for p in range(lanes):
+                one[p] = bits[p] * mix[0]
+            continue
+        same = 0
         for p in range(lanes):
-            one[p] = bits[p] * mix[0]
+            now = bits[p] * mix[0]
+            one[p] = now
+            end_of[p] = now ^ (two[p] >> np.uint64(1)) ^ (three[p] >> np.uint64(2))
+            same += row[p] == last[p]
+        some[t] = same
         found = 0
         for begin in range(0, lanes, SOME):
             end = min(begin + SOME, lanes)
-            if t < 0 or _least(one[begin:end], two[begin:end], three[begin:end]) > ends:
-                continue
-            for p in range(begin, end):
-                where[found] = p
-                found += one[p] ^ (two[p] >> np.uint64(1)) ^ (three[p] >> np.uint64(2)) <= ends
+            if _least(end_of[begin:end]) <= ends:
+                for p in range(begin, end):
+                    where[found] = p
+                    found += end_of[p] <= ends
         for k in range(found):
             p = where[k]
             first = x[t - reach, p] if t >= reach else before[t, p]
@@ -304,9 +303,8 @@ def marked(before, x, ends, mix, hashes, values, paths, steps, mixed, where, fou
 
 
 @_part
-def _least(one, two, three):
-    """The least of the hashes of ends."""
+def _least(row):
     least = np.uint64(2**64 - 1)
-    for p in range(one.shape[0]):
-        least = min(least, one[p] ^ (two[p] >> np.uint64(1)) ^ (three[p] >> np.uint64(2)))
+    for p in range(row.shape[0]):
+        least = min(least, row[p])
     return least

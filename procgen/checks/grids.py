@@ -19,7 +19,7 @@ _TRIES = 4  # sets of them: a value beside the grid spoils one
 _FEWEST = 3  # values that differ: of two, the difference says nothing
 _ROUNDING = 2.0**-50  # of a value's size: what a stored number, a sum with an offset, and a difference may be off by
 _APART = 10.0  # rooms for rounding that a grid must be wide
-_SCALES = (*(10.0**k for k in range(7)), 2.0**24)
+_SCALES = np.array([*(10.0**k for k in range(7)), 2.0**24])[:, None]
 _WHOLE = 2.0**40  # size below which a number that is whole is so by no accident
 _MOST = 0.9  # share of values that is most of them
 _MOST_DECIMALS = 15  # that can be declared
@@ -85,10 +85,11 @@ def _divisor(values: NDArray) -> float | None:
     """The greatest common divisor of the differences of ascending values; None where they have none."""
     if values.size < _FEWEST or not np.isfinite(values[-1] - values[0]):
         return None
-    for scale in _SCALES:
-        whole = np.rint(values * scale)
-        if max(abs(whole[0]), abs(whole[-1])) < _WHOLE and bool((whole / scale == values).all()):
-            return float(np.gcd.reduce(np.diff(whole).astype(np.int64))) / scale
+    scaled = np.rint(values * _SCALES)
+    fits = (np.abs(scaled[:, [0, -1]]).max(axis=1) < _WHOLE) & (scaled / _SCALES == values).all(axis=1)
+    if fits.any():
+        first = int(np.argmax(fits))
+        return float(np.gcd.reduce(np.diff(scaled[first]).astype(np.int64))) / float(_SCALES[first, 0])
     return _measured(values)
 
 

@@ -73,6 +73,12 @@ class Lane:
         self.pools = [PoolLane(p.pool, paths) if p.pool else None for p in plan.series]
         self.early = {column: Early(plan.series[column], plan.steps, paths) for column in plan.scattered}
         self.relations = [RelationLane(relation, paths) for relation in plan.relations]
+        self.due: dict[str, list[RelationLane]] = {}  # series -> the relations of which it is the last
+        self.related: dict[str, int] = {}  # series -> the column until which its tiles are wanted
+        for relation, each in zip(plan.relations, self.relations, strict=True):
+            last = max(map(plan.names.index, relation.weights))
+            self.due.setdefault(plan.names[last], []).append(each)
+            self.related |= {name: max(last, self.related.get(name, 0)) for name in relation.weights}
         self.prints = np.zeros((len(plan.series), paths), dtype=np.uint64)
         self.watches = self.sums.structure.watches(first_path, paths)
         self.held: dict[int, NDArray] = {}  # column -> the last row of what must not move at every step
@@ -95,14 +101,15 @@ class Lane:
         at, rest, self.rest = -held, self.rest, {}
         while at < whole - held:
             count = min(self.height, whole - held - at)
-            related = {}
+            related: dict[str, NDArray] = {}
             for column, name in enumerate(self.plan.names):
                 x = _tile(rest.get(name), values[name], at, count)
                 x = self._series(column, x)
-                if any(name in relation.weights for relation in self.plan.relations):
+                if name in self.related:
                     related[name] = x
-            for relation in self.relations:
-                relation.absorb(related, self.step)
+                for relation in self.due.get(name, ()):  # while its tiles are still in the processor's cache
+                    relation.absorb(related, self.step)
+                related = {kept: tile for kept, tile in related.items() if column < self.related[kept]}
             missing.join(self.plan, self.sums.events, self.step, self.events)
             ready = {pair: stated.ready - self.step for pair, stated in self.plan.shock_pairs.items()}
             self.pairs.absorb(self.shocks, count, ready)
