@@ -21,6 +21,9 @@ def filtered(y, mean, c, a, gains, scales, seen, moved, start, out, states, v):
     for two states and for a row.
     """
     count, d, paths = scales.shape[0], c.shape[0], y.shape[1]
+    if d == 1 and c[0] != 0.0 and a[0, 0] != 0.0:
+        _alone(y, mean, c[0], a[0, 0], gains, scales, seen, moved[0, 0], start[0], out, states[0, 0])
+        return
     for first in range(0, y.shape[0], count):
         for j in range(d):
             s = states[0, j]
@@ -53,6 +56,24 @@ def filtered(y, mean, c, a, gains, scales, seen, moved, start, out, states, v):
             s, last = start[k], end[k]
             for p in range(paths):
                 s[p] = last[p]
+
+
+@_part
+def _alone(y, mean, c, a, gains, scales, seen, moved, start, out, state):
+    """The same where a state is one number, in one go for each row."""
+    count, paths = scales.shape[0], y.shape[1]
+    for first in range(0, y.shape[0], count):
+        for p in range(paths):
+            state[p] = 0.0
+        for i in range(count):
+            row, z, level, scale = y[first + i], out[first + i], mean[first + i], scales[i]
+            gain, before = gains[i, 0], seen[i, 0]
+            for p in range(paths):
+                v = (row[p] - level) - c * state[p]
+                z[p] = v * scale - before * start[p]
+                state[p] = gain * v + a * state[p]
+        for p in range(paths):
+            start[p] = state[p] + moved * start[p]
 
 
 @_part
