@@ -3,6 +3,12 @@
 import signal
 import threading
 
+from hypothesis import HealthCheck, settings
+
+# How long a machine takes says nothing of what is tested.
+settings.register_profile("suite", deadline=None, suppress_health_check=[HealthCheck.too_slow])
+settings.load_profile("suite")
+
 
 def pytest_configure():
     """A suite begun in the background ignores Ctrl-C, and so would every process that a test begins and strikes."""

@@ -159,16 +159,25 @@ class Window:
         self.reach, self.held, self.paths = reach, 0, paths
         self._rows, self._end = np.empty((0, paths)), 0
 
+    def next(self, count: int) -> NDArray:
+        """Where the next `count` rows will be: who fills them in here spares `push` to copy them."""
+        if self._end + count > len(self._rows):
+            self._make_room(count)
+        return self._rows[self._end : self._end + count]
+
+    def newest(self, count: int) -> NDArray:
+        """The last `count` rows, which have all been pushed since there was last room made."""
+        return self._rows[self._end - count : self._end]
+
     def push(self, rows: NDArray) -> NDArray:
         """The held rows followed by the new ones; a view that lives until the next push."""
         view = self.room(len(rows))
-        view[len(view) - len(rows) :] = rows
+        view[len(view) - len(rows) :] = rows  # no copy where they are there already
         return view
 
     def room(self, count: int) -> NDArray:
         """The held rows followed by `count` new ones, which the caller fills."""
-        if self._end + count > len(self._rows):
-            self._make_room(count)
+        self.next(count)
         view = self._rows[self._end - self.held : self._end + count]
         self._end += count
         self.held = min(self.reach, self.held + count)

@@ -69,19 +69,22 @@ class Kalman:
         return min(len(self.gains), most)
 
     def innovations(
-        self, y: NDArray, state: NDArray, step: int, mean: NDArray | None = None
+        self, y: NDArray, state: NDArray, step: int, mean: NDArray | None = None, out: NDArray | None = None
     ) -> tuple[NDArray, NDArray]:
         """Standardised innovations (steps, paths) of the values `y` about their mean (steps,), and the state after.
 
-        `state` is the prediction for `step`, the first row of `y`. Rows that the theory calls constant are NaN.
+        `state` is the prediction for `step`, the first row of `y`. Rows that the theory calls constant are NaN. `out`:
+        where innovations may be put.
         """
         mean = np.zeros(len(y)) if mean is None else mean
+        out = np.empty(y.shape) if out is None else out
         if not self.a.any():
-            return self._without_memory(y - mean[:, None] if mean.any() else y, step), state
+            y = np.subtract(y, mean[:, None], out=out) if mean.any() else y
+            return np.multiply(y, self._scales(step, len(y))[:, None], out=out), state
         small = self._small and y.shape[1] % GROUP == 0
         size = BLOCK if small else _CHUNK
         y = y if small else y - mean[:, None]
-        out, t = np.empty(y.shape), 0
+        t = 0
         while t < len(y):
             at, left = step + t, len(y) - t
             self._extend(at + min(left, size) - 1)
@@ -96,12 +99,12 @@ class Kalman:
             t += count
         return out, state
 
-    def _without_memory(self, y: NDArray, step: int) -> NDArray:
-        """Innovations where nothing is carried from step to step: the prediction is always 0."""
-        self._extend(step + len(y) - 1)
-        roots = np.array(self.roots[step : step + len(y)])
-        roots = np.append(roots, np.full(len(y) - len(roots), self.roots[-1]))
-        return y * (1.0 / np.where(roots > 0, roots, np.nan))[:, None]
+    def _scales(self, step: int, steps: int) -> NDArray:
+        """What values are multiplied by where nothing is carried from step to step: the prediction is always 0."""
+        self._extend(step + steps - 1)
+        roots = np.array(self.roots[step : step + steps])
+        roots = np.append(roots, np.full(steps - len(roots), self.roots[-1]))
+        return 1.0 / np.where(roots > 0, roots, np.nan)
 
     def _take(self, chunk: Chunk, y: NDArray, state: NDArray, out: NDArray) -> NDArray:
         """Innovations of rows that are a whole number of chunks; the state after them."""

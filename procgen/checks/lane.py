@@ -83,7 +83,8 @@ class Lane:
         self.watches = self.sums.structure.watches(first_path, paths)
         self.held: dict[int, NDArray] = {}  # column -> the last row of what must not move at every step
         self.carriers = {name: way.start(first_path, paths) for name, way in self.sums.routes.items()}
-        self.shocks = {name: sums.lane(paths, first_path) for name, sums in self.sums.shocks.items()}
+        paired = {name for pair in self.sums.cross for name in pair}
+        self.shocks = {name: sums.lane(paths, first_path, name in paired) for name, sums in self.sums.shocks.items()}
         self.errors = {name: sums.lane(paths) for name, sums in self.sums.errors.items()}
         self.events = {name: sums.lane(paths) for name, sums in self.sums.events.items()}
         self.squares = {name: sums.lane(paths) for name, sums in self.sums.squares.items()}
@@ -149,7 +150,8 @@ class Lane:
             sums.squares[plan.name].absorb(x, self.step, self.squares[plan.name])  # type: ignore[arg-type]
         route = sums.routes.get(plan.name)
         if route is not None:
-            z, self.carriers[plan.name] = route.tile(x, self.carriers[plan.name], self.first_path, self.step)
+            out = self.shocks[plan.name].scores.next(len(x)) if route.kalman and plan.name in self.shocks else None
+            z, self.carriers[plan.name] = route.tile(x, self.carriers[plan.name], self.first_path, self.step, out)
             if route.stopped:
                 sums.stopped[plan.name] = route.stopped
             if plan.name in sums.events and self.carriers[plan.name] is not None:

@@ -112,9 +112,11 @@ class GapKalman(Kalman):
         state = np.zeros((len(self.c), paths))
         return state, np.repeat(np.array(self.p0, float)[:, :, None], paths, axis=2)
 
-    def innovations(self, y: NDArray, state: Any, step: int, mean: NDArray | None = None) -> tuple[NDArray, Any]:
+    def innovations(
+        self, y: NDArray, state: Any, step: int, mean: NDArray | None = None, out: NDArray | None = None
+    ) -> tuple[NDArray, Any]:
         y = y if mean is None else y - mean[:, None]
-        out = np.full(y.shape, np.nan)
+        out = np.empty(y.shape) if out is None else out
         s, p = state
         for row, values in enumerate(y):
             pc = _along(p, self.c[None, :, None])

@@ -82,8 +82,13 @@ class Route:
             return ranked(self.graph, self.series, self.theory, self.ranked)
         return undone(self.graph, self.series, self.theory, first_path, paths, self.forgotten)
 
-    def tile(self, x: NDArray, carrier: Any, first_path: int, first_step: int) -> tuple[NDArray, Any]:
-        """Standardised shocks (steps, paths) of the next tile of values, and the carrier after it."""
+    def tile(
+        self, x: NDArray, carrier: Any, first_path: int, first_step: int, out: NDArray | None = None
+    ) -> tuple[NDArray, Any]:
+        """Standardised shocks (steps, paths) of the next tile of values, and the carrier after it.
+
+        `out`: memory that they may be put in.
+        """
         if self.ranked is not None and carrier is not None:
             v = self._dither(x, first_path, first_step) + 0.5
             with np.errstate(all="ignore"):
@@ -92,11 +97,11 @@ class Route:
         if self.own and self.kalman is not None:  # what is spread is the distance from the mean
             x = x - self._mean(first_step, len(x))[:, None]
             x += self.grain * self._dither(x, first_path, first_step)
-            return self.kalman.innovations(x, carrier, first_step)
+            return self.kalman.innovations(x, carrier, first_step, out=out)
         if self.grain and not self.own:
             x = x + self.grain * self._dither(x, first_path, first_step)
         if self.kalman is not None:
-            return self.kalman.innovations(x, carrier, first_step, self._mean(first_step, len(x)))
+            return self.kalman.innovations(x, carrier, first_step, self._mean(first_step, len(x)), out)
         if carrier is not None:
             with np.errstate(all="ignore"):
                 z = carrier.tile(x)

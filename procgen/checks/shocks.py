@@ -6,6 +6,7 @@ cutting. A :class:`ShockLane` carries what the next tile of the same paths needs
 
 from __future__ import annotations
 
+import math
 from collections import Counter
 from collections.abc import Sequence
 from dataclasses import dataclass, field
@@ -45,10 +46,11 @@ class ShockLane:
     """What is carried from tile to tile for one range of paths.
 
     `scores` and `clusters` hold the last rows; `view` and `sizes` are those of both, the newest tile at their end.
+    Only where the series is compared with others (`paired`) is all of `sizes` sure to be there.
     """
 
-    def __init__(self, paths: int, lags: Sequence[int] = MEMORY_LAGS, first_path: int = 0):
-        self.first_path = first_path
+    def __init__(self, paths: int, lags: Sequence[int] = MEMORY_LAGS, first_path: int = 0, paired: bool = True):
+        self.first_path, self.paired = first_path, paired
         self.scores, self.clusters = Window(max(lags), paths), Window(max(CLUSTER_LAGS), paths)
         self.totals = np.zeros((FIRST_LAG + len(lags) + len(CLUSTER_LAGS), paths))
         memory, cluster = (len(each) for each in (MEMORY_LAGS, CLUSTER_LAGS))
@@ -129,17 +131,34 @@ class ShockSums:
     def stretched(self) -> NDArray:
         return self.stretches.sums
 
-    def lane(self, paths: int, first_path: int = 0) -> ShockLane:
-        return ShockLane(paths, self.lags, first_path)
+    def lane(self, paths: int, first_path: int = 0, paired: bool = True) -> ShockLane:
+        return ShockLane(paths, self.lags, first_path, paired)
 
     def absorb(self, z: NDArray, first_step: int, lane: ShockLane, x: NDArray | None = None) -> None:
-        """Add the shocks of a tile, NaN where there is none, of the values x."""
-        lane._earlier = None
-        known = np.isfinite(z)
-        whole, offset = bool(known.all()), 0
+        """Add the shocks of a tile, NaN where there is none, of the values x.
+
+        Where the first of a path are unknown, as those of a variance that begins anywhere, the rest goes at once.
+        """
+        whole = _all_known(z)
+        cut = 0 if whole or not is_compiling() else _known_from(z)
+        if not 0 < cut < len(z):
+            self._absorb(z, first_step, lane, x, whole)
+            return
+        z, x = z.copy(), z if x is None else x  # it may be of the window, where the first shocks of all are moved up
+        windows = lane.scores, lane.clusters
+        for window in windows:
+            window.next(len(z))  # so that both parts will lie one behind the other
+        self._absorb(z[:cut], first_step, lane, x[:cut], False)
+        seen = len(lane.view), len(lane.sizes)
+        self._absorb(z[cut:], first_step + cut, lane, x[cut:], True)
+        lane.view, lane.sizes = (window.newest(n + len(z) - cut) for window, n in zip(windows, seen, strict=True))
+
+    def _absorb(self, z: NDArray, first_step: int, lane: ShockLane, x: NDArray | None, whole: bool) -> None:
+        lane._earlier, offset = None, 0
+        known = z if whole else np.isfinite(z)
         if not whole and not lane.scores.held:  # nothing is carried so far: it begins with the first shock
             offset = int(np.argmax(known.any(axis=1)))
-            z, known, x = z[offset:], known[offset:], None if x is None else x[offset:]
+            z, known, x = z[offset:].copy(), known[offset:], None if x is None else x[offset:]  # z may be of the window
             whole = bool(known.all())
             if not known[0].any():
                 return
@@ -180,11 +199,11 @@ class ShockSums:
         g = lane.view[len(lane.view) - steps :]
         worst, profile, blocks = np.empty(steps, np.int64), np.empty((2, steps)), np.empty((steps // BLOCK, paths))
         squares = self.stretches.takes(first_step, lane.stretches)
+        kept = BLOCK if lane.paired else max(CLUSTER_LAGS)
         in_one_pass(
-            "strips", lane.view, lane.sizes, steps, pieces(), CELLS_OF_SD, self.counts, worst, lane.totals, lane.places,
-            lane.beside, profile, scratch(2 * BLOCK, -(-paths // STRIP), 1).reshape(2, BLOCK, -1),
-            np.empty((2, paths)) if squares is None else squares, blocks, room(ROOM),
-            module="strips",
+            "strips", lane.view, lane.sizes, steps, kept, pieces(), CELLS_OF_SD, self.counts, worst, lane.totals,
+            lane.places, lane.beside, profile, scratch(2 * BLOCK, -(-paths // STRIP), 1).reshape(2, BLOCK, -1),
+            np.empty((2, paths)) if squares is None else squares, blocks, room(ROOM), module="strips",
         )  # fmt: skip
         for i, lag in enumerate(self.lags[len(MEMORY_LAGS) :], FIRST_LAG + len(MEMORY_LAGS)):
             add_lagged(lane.totals[i], lane.view, lane.view, lag, steps)
@@ -220,7 +239,7 @@ class ShockSums:
         self.asymmetry[0] += paths * min(steps, len(lane.view) - 1)
         self._add_profile(np.full(steps, float(paths)), profile, first_step)
         if paths > 1:
-            self.rows[min(paths, GROUP)] += steps * -(-paths // GROUP)
+            self.rows.update(_all_runs(steps, paths))
         self.far = farthest.farthest(g, z, x, lane.first_path, first_step, self.far, worst, self.least)
         if blocks is None:
             self.stretches.absorb(g, first_step, lane.stretches)
@@ -255,7 +274,7 @@ class ShockSums:
         self._add_profile(counts, (across(g), across(square)), first_step)
         if paths > 1:
             add_products(lane.beside, g[:, 1:], g[:, :-1], offset)
-            self.rows.update({min(paths, GROUP): len(g) * -(-paths // GROUP)} if whole else _runs(known))
+            self.rows.update(_all_runs(len(g), paths) if whole else _runs(known))
 
     def _add_profile(self, counts: NDArray, sums: Sequence[NDArray] | NDArray, first_step: int) -> None:
         """Add what is known of each step of a tile, one step after another."""
@@ -315,6 +334,17 @@ class ShockSums:
 SHOCK_ARRAYS = ("sums", "counts", "paths", "profile", "memory", "cluster", "asymmetry", "square", "stretched", "phases")
 
 
+def _all_known(z: NDArray) -> bool:
+    """Whether all of an array is finite: its product with itself tells, but for an overflow, in half the time."""
+    return (z.flags.c_contiguous and math.isfinite(np.dot(z.ravel(), z.ravel()))) or bool(np.isfinite(z).all())
+
+
+def _known_from(z: NDArray) -> int:
+    """The first row of a block from which on all of a tile is known."""
+    unknown = np.flatnonzero(~np.isfinite(z).all(axis=1))
+    return -(-(int(unknown[-1]) + 1) // BLOCK) * BLOCK if unknown.size else 0
+
+
 def _pairs(view: NDArray, lags: Sequence[int], steps: int) -> NDArray | int:
     """How many pairs of known scores each path has at these lags in the last `steps` of a view."""
     if len(view) - steps >= max(lags):
@@ -355,6 +385,11 @@ def _runs(known: NDArray) -> dict[int, int]:
     edges = np.flatnonzero(np.diff(padded.ravel(), prepend=0))
     lengths, counts = np.unique(edges[1::2] - edges[::2], return_counts=True)
     return dict(zip(lengths.tolist(), counts.tolist(), strict=True))
+
+
+def _all_runs(steps: int, paths: int) -> dict[int, int]:
+    """The same where all of so many paths are known: whole lane groups, and what is left of one."""
+    return {length: steps * times for length, times in ((GROUP, paths // GROUP), (paths % GROUP, 1)) if length * times}
 
 
 NEAR = (-2, -1, 0, 1, 2)  # lags at which two series are compared

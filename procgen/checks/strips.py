@@ -27,13 +27,16 @@ _STEEP, _FALL = 6 * np.sqrt(5.0), 0.5 * np.sqrt(5.0)  # of `scores.cluster_score
 _part = partial(compiled_function, inline="always")
 
 
-def strips(g, clusters, steps, table, scale, counts, worst, totals, at, beside, profile, tops, squares, blocks, room):
+def strips(
+    g, clusters, steps, kept, table, scale, counts, worst, totals, at, beside, profile, tops, squares, blocks, room
+):  # fmt: skip
     """Sum over the last `steps` of two windows' views, g of scores and clusters, whose new rows are filled in here.
 
-    table, scale: of `uniforms.pieces`. counts: by bin of the uniforms. worst: bits of the largest size of each step.
-    totals: rows by path, of which at[k] is that of sum k; beside: products with the left neighbour, from the second
-    path on. profile (2, steps): sums of g and g² over paths; tops: room for (2, 64, strips). squares: by path those of
-    the sums over stretches of 16 and of 64 steps, the latter being blocks. room: arrays of the sizes of ROOM.
+    kept: how many of the last rows of each block of clusters are filled in. table, scale: of `uniforms.pieces`.
+    counts: by bin of the uniforms. worst: bits of the largest size of each step. totals: rows by path, of which at[k]
+    is that of sum k; beside: products with the left neighbour, from the second path on. profile (2, steps): sums of g
+    and g² over paths; tops: room for (2, 64, strips). squares: by path those of the sums over stretches of 16 and of
+    64 steps, the latter being blocks. room: arrays of the sizes of ROOM.
     """
     held, held_too, paths = g.shape[0] - steps, clusters.shape[0] - steps, g.shape[1]
     scores, sizes, sums, twos, fours, eights = room
@@ -47,7 +50,7 @@ def strips(g, clusters, steps, table, scale, counts, worst, totals, at, beside, 
             _fetch(clusters, held_too + first - SIZES_BEFORE, SIZES_BEFORE, path, width, sizes)
             new, fresh = scores[WIDTH * BEFORE :], sizes[WIDTH * SIZES_BEFORE :]
             _scored(new, width, count, table, scale, counts, fresh)
-            for t in range(count):
+            for t in range(max(count - kept, 0), count):
                 row, out = fresh[WIDTH * t : WIDTH * (t + 1)], clusters[held_too + first + t][path:]
                 for p in range(width):
                     out[p] = row[p]

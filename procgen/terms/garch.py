@@ -168,10 +168,11 @@ class Garch(Conditional):
             state = {**self.left(), "skip": np.array([0])}
         elif state is None:
             state = {**self.rest(), "skip": np.array([0])}
-        square = np.concatenate([np.broadcast_to(state["square"], (p, values.shape[1])), values * values])
-        h = _buffer(state["h"], values)
+        square, h = _buffer(state["square"], values), _buffer(state["h"], values)
+        np.multiply(values, values, out=square[p:])
         variance(self.level(), np.array(self.alpha), np.array(self.beta), square, h)
-        z = values / np.sqrt(h[q:])
+        z = np.sqrt(h[q:])
+        np.divide(values, z, out=z)
         skip = int(state["skip"][0])
         if gap or (at[0] == 0 and self.before is None):  # an unknown start of the variance must be forgotten first
             skip = gap + p + (decay_length(companion(self.beta, (), q, 0)[0], self.forgotten) if q else 0)

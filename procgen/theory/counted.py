@@ -8,6 +8,7 @@ from typing import Any
 
 import numpy as np
 
+from procgen.chance.laws.gaussian import Gaussian
 from procgen.theory.lumps import Point, parts_of
 
 NODES = 120
@@ -93,9 +94,7 @@ class Inflated:
 
 def _nodes(of: Any, count: int) -> tuple[np.ndarray, np.ndarray]:
     """Weights of equal steps of a normal number, and the quantiles of a law there."""
-    from scipy.stats import norm
-
-    z = np.linspace(-8.3, 8.3, count)
+    norm, z = Gaussian(), np.linspace(-8.3, 8.3, count)
     weights = np.exp(-z * z / 2.0)
     return weights / weights.sum(), np.where(z < 0, of.ppf(norm.cdf(z)), of.isf(norm.sf(z)))
 

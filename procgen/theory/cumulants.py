@@ -28,6 +28,11 @@ def joint_cumulant(source: Source, forms: Sided, t: np.ndarray, s: np.ndarray) -
         raise Unknown(f"{source.key} has no finite moment of order {order}")
     if cumulant == 0.0:
         return np.zeros(t.shape)
+    delays = [_single_delay(form) for form, _ in forms]
+    if None not in delays:
+        steps = [(s if side else t) - delay for delay, (_, side) in zip(delays, forms, strict=True)]
+        same = np.all([step == steps[0] for step in steps[1:]], axis=0)
+        return float(cumulant) * source.variance ** (order / 2) * _scale(forms) * same
     sums = over_distinct(forms, t, s, lambda steps: float(np.prod(weights_at(forms, steps), axis=0).sum()))
     return float(cumulant) * source.variance ** (order / 2) * sums
 
@@ -41,6 +46,8 @@ def garch_product(space: Space, source: Source, forms: Sided, t: np.ndarray, s: 
     """
     if source.path is not None:
         return _started_product(source, forms, t, s)
+    if (single := _squares_of_single_shocks(space, source, forms, t, s)) is not None:
+        return single
     covariances = square_covariance(space, source, np.arange(1))
 
     def excess(steps: list[int]) -> float:
@@ -53,6 +60,36 @@ def garch_product(space: Space, source: Source, forms: Sided, t: np.ndarray, s: 
         return paired - 2.0 * float((a * b * c * d).sum()) * (float(covariances[0]) + source.variance**2)
 
     return over_distinct(forms, t, s, excess)
+
+
+def _squares_of_single_shocks(
+    space: Space, source: Source, forms: Sided, t: np.ndarray, s: np.ndarray
+) -> np.ndarray | None:
+    """The same at once where two forms are of one shock u and two of another one, v; None where they are not.
+
+    It is Cov(e(u)^2, e(v)^2), less the 2 Var(e)^2 that two more pairings have where u = v.
+    """
+    delays = [_single_delay(form) for form, _ in forms]
+    sides = [{delay for delay, (_, side) in zip(delays, forms, strict=True) if side == here} for here in (0, 1)]
+    if None in delays or any(len(each) != 1 for each in sides) or sum(side for _, side in forms) != 2:
+        return None
+    (first,), (second,) = sides
+    lags = np.abs((t - first) - (s - second))
+    beyond = square_covariance(space, source, lags.ravel()).reshape(lags.shape)
+    return _scale(forms) * (beyond - 2.0 * source.variance**2 * (lags == 0))
+
+
+def _single_delay(form: Linear) -> int | None:
+    """How many steps ago the one shock was that a form is of; None where it is of more."""
+    (key, *others) = form
+    if others or not isinstance(key, At) or key.base.phi or key.base.started:
+        return None
+    return key.delay
+
+
+def _scale(forms: Sided) -> float:
+    """Product of the weights of forms of one shock each."""
+    return float(np.prod([weight for form, _ in forms for weight in form.values()]))
 
 
 def _started_product(source: Source, forms: Sided, t: np.ndarray, s: np.ndarray) -> np.ndarray:

@@ -8,6 +8,7 @@ from typing import Any
 
 import numpy as np
 
+from procgen.chance.laws.gaussian import Gaussian
 from procgen.theory import known
 from procgen.theory.arma import PowerSeries
 from procgen.theory.known import Known
@@ -71,12 +72,10 @@ class Distributed(Process):
         return self.with_expression(alone(self.body.space, other), t, s)
 
     def marginal(self, step: int) -> Any:
-        from scipy.stats import norm
-
         if not self.gaussian:
             return super().marginal(step)
         at = np.array([step], np.int64)
-        return norm(0.0, np.sqrt(float(self.covariance(at, at)[0])))
+        return Gaussian(0.0, float(np.sqrt(self.covariance(at, at)[0])))
 
 
 def _crossed(a: Distributed | None, b: Distributed | None, x: Any, y: Any, t: Steps, s: Steps) -> np.ndarray:

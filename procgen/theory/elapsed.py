@@ -7,6 +7,7 @@ from typing import Any
 
 import numpy as np
 
+from procgen.chance.laws.gaussian import Gaussian
 from procgen.theory.processes import Held, Process, Steps, alone, at_any
 from procgen.theory.unknown import Unknown
 from procgen.theory.verdict import LEAVES, MEMORY, SETTLES
@@ -93,10 +94,8 @@ class Pulled(Process):
         return np.sqrt(np.expm1(-2.0 * self.rate * lengths) / math.expm1(-2.0 * self.rate))
 
     def marginal(self, step: int) -> Any:
-        from scipy.stats import norm
-
         at = np.array([step], np.int64)
-        return norm(0.0, math.sqrt(float(self.covariance(at, at)[0])))
+        return Gaussian(0.0, math.sqrt(float(self.covariance(at, at)[0])))
 
 
 def forecast(rate: float, clock: Any, past: float, steps: Steps) -> np.ndarray:

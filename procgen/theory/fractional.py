@@ -14,6 +14,7 @@ from typing import Any
 
 import numpy as np
 
+from procgen.chance.laws.gaussian import Gaussian
 from procgen.theory.arma import cross_covariance
 from procgen.theory.processes import Process, Steps
 from procgen.theory.recursion import recursed
@@ -52,9 +53,7 @@ class StationaryGaussian(Process):
         return self.autocovariance.weights(count)
 
     def marginal(self, step: int) -> Any:
-        from scipy.stats import norm
-
-        return norm(0.0, math.sqrt(float(self.autocovariance(np.zeros(1, np.int64))[0])))
+        return Gaussian(0.0, math.sqrt(float(self.autocovariance(np.zeros(1, np.int64))[0])))
 
 
 class FractionalNoise:

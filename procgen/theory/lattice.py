@@ -14,6 +14,7 @@ from typing import Any
 
 import numpy as np
 
+from procgen.chance.laws.gaussian import Gaussian
 from procgen.theory.processes import Held, Process, alone, at_any, mean_at
 from procgen.theory.unknown import Unknown
 
@@ -110,19 +111,19 @@ class Multiples:
         return (whole + 0.5 - self.m) / self.sd
 
     def cdf(self, x):
-        return _normal().cdf(self._border(x))
+        return Gaussian().cdf(self._border(x))
 
     def sf(self, x):
-        return _normal().sf(self._border(x))
+        return Gaussian().sf(self._border(x))
 
     def _at(self, z):
         return self.spacing * np.ceil(self.m + self.sd * z - 0.5) - self.base
 
     def ppf(self, p):
-        return self._at(_normal().ppf(p))
+        return self._at(Gaussian().ppf(p))
 
     def isf(self, p):
-        return self._at(_normal().isf(p))
+        return self._at(Gaussian().isf(p))
 
     def mean(self) -> float:
         return 0.0
@@ -133,19 +134,13 @@ class Multiples:
         return self.spacing**2 * float(way("", m, u, m, u, u * u)[0])
 
 
-def _normal() -> Any:
-    from scipy.stats import norm
-
-    return norm
-
-
 def _below(m: np.ndarray, sd: np.ndarray) -> np.ndarray:
     """E of round(x) - round(m) for x normal with a standard deviation below 1, by areas beyond borders."""
     k = np.arange(NEAR) + 0.5
     rest = (m - np.rint(m))[..., None]
     with np.errstate(divide="ignore", invalid="ignore"):
         up, down = (k - rest) / sd[..., None], (k + rest) / sd[..., None]
-    norm = _normal()
+    norm = Gaussian()
     still = sd <= 0.0
     return np.where(still, 0.0, (norm.sf(np.where(still[..., None], 1.0, up)) - norm.sf(down)).sum(axis=-1))
 
@@ -168,7 +163,7 @@ def _slope(m: np.ndarray, sd: np.ndarray) -> np.ndarray:
     borders = np.rint(m)[..., None] + np.arange(-NEAR, NEAR) + 0.5
     with np.errstate(divide="ignore", invalid="ignore"):
         z = (borders - m[..., None]) / sd[..., None]
-        coarse = _normal().pdf(z).sum(axis=-1) / sd
+        coarse = Gaussian().pdf(z).sum(axis=-1) / sd
     return np.where(sd >= 1.0, fine, np.where(sd > 0.0, coarse, 0.0))
 
 

@@ -6,6 +6,7 @@ from typing import Any
 
 import numpy as np
 
+from procgen.chance.laws.gaussian import Gaussian
 from procgen.terms.base import LEAST_LOG
 from procgen.theory import exponentials
 from procgen.theory.covariance import covariance
@@ -37,12 +38,10 @@ def marginal(x: Expression, step: int) -> Any:
     if x.law is not None:
         return x.law(step)
     if is_gaussian(x):
-        from scipy import stats  # only here: of many series the law is not known, and it takes long to import
-
         variance = float(x.covariance(x, at, at)[0])
         if variance <= 0.0:
             raise Unknown("the value at that step is known, not random")
-        return stats.norm(float(x.mean(at)[0]), float(np.sqrt(variance)))
+        return Gaussian(float(x.mean(at)[0]), float(np.sqrt(variance)))
     if not x.linear and len(x.terms) == 1 and next(iter(x.terms)).exponent:
         (term, c), level = next(iter(x.terms.items())), float(x.mean_path(at)[0])
         return _lognormal(x.space, term, c * float(term.coefficient(at)[0]), level, at)

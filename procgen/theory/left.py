@@ -6,6 +6,7 @@ from typing import Any
 
 import numpy as np
 
+from procgen.chance.laws.gaussian import Gaussian
 from procgen.theory.processes import Process, Steps
 from procgen.theory.system import System
 from procgen.theory.verdict import GROWS, SETTLES, UNIT_ROOT, VARIES
@@ -41,7 +42,5 @@ class LeftOpen(Process):
         return out.reshape(shape)
 
     def marginal(self, step: int) -> Any:
-        from scipy.stats import norm
-
         at = np.array([step], np.int64)
-        return norm(0.0, float(np.sqrt(self.covariance(at, at)[0])))
+        return Gaussian(0.0, float(np.sqrt(self.covariance(at, at)[0])))

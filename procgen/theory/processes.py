@@ -12,6 +12,7 @@ from typing import Any
 
 import numpy as np
 
+from procgen.chance.laws.gaussian import Gaussian
 from procgen.theory.known import constant
 from procgen.theory.linear import At, Base, Linear, base_of
 from procgen.theory.sources import Source, Space
@@ -171,9 +172,7 @@ class Hinged(Process):
 
     def mean(self, steps: Steps) -> np.ndarray:
         """E max(x, 0)."""
-        from scipy.stats import norm
-
-        steps = np.asarray(steps, np.int64)
+        norm, steps = Gaussian(), np.asarray(steps, np.int64)
         sd, a = self.spread(steps)
         level = mean_at(self.body, steps)
         return np.where(sd > 0.0, sd * norm.pdf(a) + level * norm.sf(a), np.maximum(level, 0.0))
@@ -190,18 +189,14 @@ class Hinged(Process):
         return both * hinge_covariance(np.where(still, 0.0, a), np.where(still, 0.0, b), np.clip(r, -1.0, 1.0))
 
     def with_expression(self, other, t, s):
-        from scipy.stats import norm
-
         from procgen.theory.laws import jointly_gaussian
 
         if not jointly_gaussian(self.body, other):
             return super().with_expression(other, t, s)
-        return at_any(self.body, other, t, s) * norm.sf(self.spread(t)[1])  # Stein (1981)
+        return at_any(self.body, other, t, s) * Gaussian().sf(self.spread(t)[1])  # Stein (1981)
 
     def with_process(self, own, other, t, s):
-        if isinstance(other.detail, Hinged) and self.body.space.gaussian(
-            self.body.sources | other.detail.body.sources
-        ):
+        if isinstance(other.detail, Hinged) and self.body.space.gaussian(self.body.sources | other.detail.body.sources):
             return self.crossed(other.detail, t, s)
         if isinstance(other.detail, Held):
             return other.detail.with_expression(alone(self.body.space, own), s, t)
@@ -305,10 +300,8 @@ def hinge_covariance(a: np.ndarray, b: np.ndarray, r: np.ndarray) -> np.ndarray:
 
     It is r Q(a) Q(b) + the integral over u from 0 to r of (r - u) phi(a, b; u), with u = sin(angle).
     """
-    from scipy.stats import norm
-
     flat = [np.ravel(x).astype(float) for x in np.broadcast_arrays(a, b, r)]
-    out = flat[2] * norm.sf(flat[0]) * norm.sf(flat[1])
+    out = flat[2] * Gaussian().sf(flat[0]) * Gaussian().sf(flat[1])
     for first in range(0, len(out), AT_ONCE):
         part = slice(first, first + AT_ONCE)
         out[part] += _tilted(*(x[part, None] for x in flat))
@@ -357,5 +350,5 @@ def alone(space: Space, source: Source) -> Any:
 
 def _expression(space: Space, form: Linear) -> Any:
     from procgen.theory.expression import Expression
-    
+
     return Expression(space, constant(0.0), form)

@@ -7,6 +7,7 @@ from typing import Any
 
 import numpy as np
 
+from procgen.chance.laws.gaussian import Gaussian
 from procgen.theory.known import observed
 from procgen.theory.linear import At, Linear
 from procgen.theory.processes import Process, Steps
@@ -65,10 +66,8 @@ class Component(Process):
         return ((SETTLES, f"{self.name} {LEAVES}: its unit roots cancel"),)
 
     def marginal(self, step: int) -> Any:
-        from scipy.stats import norm
-
         at = np.array([step], np.int64)
-        return norm(0.0, float(np.sqrt(self.covariance(at, at)[0])))
+        return Gaussian(0.0, float(np.sqrt(self.covariance(at, at)[0])))
 
 
 def _staying(transition: np.ndarray) -> np.ndarray:

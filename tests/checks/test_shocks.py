@@ -185,3 +185,16 @@ def test_steps_that_share_an_entry_are_added_one_after_another(first, count):
     _add_in_turn(row, values, first, width)
     np.testing.assert_array_equal(row, expected)
     np.testing.assert_array_equal(found, expected)
+
+
+@pytest.mark.parametrize("paths", [2, 15, 16, 17, 31, 48])
+def test_neighbours_are_counted_within_their_lane_group(paths):
+    """As many pairs are told as there are in groups of 16, whether all shocks are known or a late one is missing."""
+    pairs, z = 30 * sum(min(paths - first, 16) - 1 for first in range(0, paths, 16)), np.ones((30, paths))
+    for missing in (0, 1):
+        sums = ShockSums(Scores(LAWS["normal"]()), 30)
+        lane = sums.lane(paths)
+        z[:missing, 0] = np.nan
+        sums.absorb(z, 0, lane)
+        sums.finish(lane)
+        assert sum((length - 1) * times for length, times in sums.rows.items()) == pairs - missing
