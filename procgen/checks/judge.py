@@ -18,6 +18,7 @@ from procgen.checks import power, tails
 FEW_PATHS = 100  # below this many paths no central limit theorem over paths is trusted
 _PLACES = tuple(4.0 * 1.05**k for k in range(40))  # standard errors, at which a tail that falls is made sure of
 _TRUSTED = 0.5  # the largest relative error of a tail (as a logarithm) that still counts as known
+_STEADY = 3.0  # times the skewness of products that products which depart were seen to have (tests/studies/power.py)
 
 
 def _always(level: float) -> str | None:
@@ -35,7 +36,7 @@ class Finding:
     log_p : float
         Natural logarithm of p.
     detect : callable
-        Level -> smallest departure found 9 times in 10, in the unit of the estimate (None: not known).
+        Level -> smallest departure found 9 times in 10, in the unit of the estimate (None: none can be promised).
     doubt : callable
         Level -> why p cannot be trusted that far out, or None.
     """
@@ -55,9 +56,7 @@ def unit(z: float, error: float, theory: float = 0.0, skew: float = 0.0, excess:
     """
     more = max(excess - 1.5 * skew * skew, 0.0)
     log_p = min(0.0, _falling(lambda x: tails.two_sided(*tails.pearson3(x, skew)) + tails.lift(x, more), z))
-    return Finding(
-        theory, theory + z * error, error, log_p, lambda level: power.shift(level, error, abs(skew), excess)
-    )
+    return Finding(theory, theory + z * error, error, log_p, lambda level: power.shift(level, error, abs(skew), excess))
 
 
 def normal_mean(off: float, mu: float, sd: float, n: int) -> Finding:
@@ -266,7 +265,21 @@ def with_doubt(finding: Finding, doubt: Callable[[float], str | None]) -> Findin
 def of_scale(finding: Finding) -> Finding:
     """The finding of a spread, whose estimate is the less certain the larger it is."""
     error, theory, plain = finding.standard_error, finding.theory, finding.detect
-    return replace(finding, detect=lambda level: power.of_scale(plain(level) or math.inf, error, theory))
+
+    def detect(level: float) -> float | None:
+        shift = plain(level)
+        return None if shift is None else power.of_scale(shift, error, theory)
+
+    return replace(finding, detect=detect)
+
+
+def of_products(finding: Finding, sample: Sample, times: float = 1.0) -> Finding:
+    """The finding of a mean product without a known sd: no size is promised where what departs could be too skewed.
+
+    Products of values that follow each other more closely are more skewed than those that were seen.
+    """
+    gauge, plain = _STEADY * times * abs(sample.skew) / (3 * math.sqrt(sample.n)), finding.detect
+    return replace(finding, detect=lambda level: None if gauge * power.needed(level) ** 3 > 1.0 else plain(level))
 
 
 def reach_of_worst(level: float, n: int) -> float:

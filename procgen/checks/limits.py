@@ -57,6 +57,8 @@ def limit(
         note = few_paths(sample.n, FEW_PATHS)
         return Check(plan.name, what, probe, kind, theory, theory + sample.mean, outcome="reported", note=note)
     finding = judge.sample_mean(sample, theory, sd, hidden)
+    if sd is None and order == 2:
+        finding = judge.of_products(finding, sample)
     if kind == "spread":
         finding = judge.of_scale(finding)
     return Check.of(plan.name, what, probe, kind, finding)
@@ -71,10 +73,15 @@ def clustering(
     theory: float,
     least: int = FEW_PATHS,
     times: float = 1.0,
+    grows: bool = False,
 ) -> Check:
-    """A check of clustering by averages along paths, of which there must be `least`; `times` as for `sample_mean`."""
+    """A check of clustering by averages along paths, of which there must be `least`; `times` as for `sample_mean`.
+
+    grows: whether an estimate above theory is the less certain, as one of a spread is.
+    """
     sample = sample_of(powers, k)
     if sample.n < least or sample.sd == 0.0:
         estimate, note = theory + sample.mean, few_paths(sample.n, least)
         return Check(series, what, probe, "clustering", theory, estimate, outcome="reported", note=note)
-    return Check.of(series, what, probe, "clustering", judge.sample_mean(sample, theory, times=times))
+    finding = judge.of_products(judge.sample_mean(sample, theory, times=times), sample, times)
+    return Check.of(series, what, probe, "clustering", judge.of_scale(finding) if grows else finding)

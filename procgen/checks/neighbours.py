@@ -117,4 +117,4 @@ class NeighbourSums:
     def checks(self, series: str) -> Iterator[Check]:
         """The covariance of sizes at each lag."""
         for k, (lag, stated) in enumerate(zip(self.plan.lags, self.plan.sizes.covariances, strict=True)):
-            yield clustering(series, _WHAT, f"lag {lag}", self.powers, k, stated, _FEW, HIDDEN)
+            yield clustering(series, _WHAT, f"lag {lag}", self.powers, k, stated, _FEW, HIDDEN, stated > 0.0)

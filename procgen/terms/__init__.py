@@ -12,8 +12,8 @@ family. `level`, `walk`, `arma` and `garch` show the range. What they share:
 - A recorded past, from which a series leaves: `past`, by undoing one source (`past_single`) or by a filter over a sum
   (`past_filter`, `past_parts`, `open_start`).
 - Numbers drawn by path: `varied`, `by_path`; many paths at once: `rows` and `stack`.
-- Back from values: `recover` undoes and foretells; `ranks` where nothing can be undone, `followed`, `hidden_states` and
-  `instate` where chains stand behind the values.
+- Back from values: `recover` undoes and foretells; `ranks` where nothing can be undone, `followed`, `hidden_states`,
+  `hidden_memory` and `instate` where chains stand behind the values.
 - `recipe`: what each series depends on, so that two specs are compared without drawing.
 """
 

@@ -23,6 +23,7 @@ from procgen.terms.recover import sources_below
 MOST = 40  # states, and stages of stays, of all chains together
 NEAR = 1e-9  # of a value's size: what is as near to a value with a chance of its own is it
 NARROW = 1e-3  # of a spread: in a cell of at most this width a density is flat
+_LOG_ROOT = 0.9189385332046727  # log sqrt(2 π): densities of several laws are weighed against each other
 
 
 class Refused(Exception):
@@ -208,7 +209,7 @@ def _functions(law: Any) -> tuple[Any, Any, Any]:
     if getattr(law, "gaussian", False):
         from scipy.special import ndtr
 
-        return ndtr, lambda z: ndtr(-z), lambda z: -0.5 * z * z
+        return ndtr, lambda z: ndtr(-z), lambda z: -0.5 * z * z - _LOG_ROOT
     found = law.distribution() if hasattr(law, "distribution") else law
     sf = getattr(found, "sf", lambda z: 1.0 - found.cdf(z))
     return found.cdf, sf, getattr(found, "logpdf", None) or (lambda z: np.log(found.pdf(z)))

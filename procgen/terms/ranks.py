@@ -14,6 +14,7 @@ import numpy as np
 from procgen.terms.base import Array, Node, Unknown
 from procgen.terms.combine import Exp, Hidden
 from procgen.terms.graph import Graph, Source
+from procgen.terms.hidden_memory import hidden_memory
 from procgen.terms.hidden_states import hidden_states
 from procgen.terms.operators import Integrate
 from procgen.terms.recover import KnownParts, sources_below
@@ -42,6 +43,8 @@ def _of_hidden_states(graph: Graph, series: str, whole: bool, grain: float) -> R
     why = None
     while not isinstance(node, Source):
         found = hidden_states(graph, node, grain)
+        if isinstance(found, Unknown):
+            found = hidden_memory(graph, node, grain) or found
         if isinstance(found, Node):
             blurred = _blurring(chain, whole) if found.term.lumpy else ()
             if blurred:

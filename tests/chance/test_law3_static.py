@@ -60,6 +60,7 @@ EXEMPT_PLACES = {
     ("terms/inar.py", "_given"),  # moments
     ("terms/inar.py", "_law_after"),
     ("terms/prices.py", "_log_before"),  # of `rank`
+    *(("terms/hidden_memory.py", name) for name in ("spreads", "_step", "_body", "body_gap", "_total", "_remembering")),
     ("terms/hidden_states.py", "__init__"),  # a term that only checks ask
     ("terms/hidden_states.py", "_law"),
     ("terms/hidden_states.py", "_law_of"),

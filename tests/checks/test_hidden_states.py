@@ -66,6 +66,8 @@ UNDONE = {
     "a filter above": "{ar: {phi: 0.6, shock: {switching_noise: {sd: {a: 1, b: 4}, durations: {a: 40, b: 8}}}}}",
     "beside a season": "[{seasonal: {period: 12, harmonics: [{amplitude: 3}]}}, "
     "{switching_noise: {sd: {a: 1, b: 4}, durations: {a: {mean: 20, stages: 3}, b: 8}, law: laplace}}]",
+    "a normal law beside another": "{regimes: {branches: {a: [{white_noise: {sd: 1}}], "
+    "b: [{white_noise: {sd: 2, law: laplace}, as: w}]}, durations: {a: 20, b: 8}}}",
     "two chains": "[{switching_noise: {sd: {a: 1, b: 4}, durations: {a: 9, b: 4}}}, "
     "{product: [{flag: {share: 0.3, stay: 4}}, {constant: 5}]}]",
     "started": "{regimes: {branches: {a: [{constant: 1}, {white_noise: {sd: 1}}], b: [{white_noise: {sd: 3}, as: w}]}, "
@@ -86,7 +88,7 @@ def test_ranks_are_uniform_and_white(name):
 
 def test_what_has_a_memory_that_is_hidden_is_refused():
     graph = graph_of(
-        "  x: {regimes: {branches: {a: [{ar: {phi: 0.5, sd: 1}}], b: [{white_noise: {sd: 3}}]}, "
+        "  x: {regimes: {branches: {a: [{ar: {phi: [0.5, 0.2], sd: 1}}], b: [{white_noise: {sd: 3}}]}, "
         "durations: {a: 4, b: 8}}}"
     )
     assert "x.ar is not made of its own step alone" in ranking(graph, "x", False, 0.0).reason

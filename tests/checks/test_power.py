@@ -26,7 +26,7 @@ QUICK = [
 def test_a_printed_size_is_found_nine_times_in_ten(plant):
     # Of 150 seeds at a true share of 0.9, fewer than 108 or all are found with probability below 5e-7 (SciPy).
     assert stats.binom.cdf(107, SEEDS, 0.9) + stats.binom.sf(SEEDS - 1, SEEDS, 0.9) < 5e-7
-    _, hits, runs = study.caught(plant, range(1, SEEDS + 1), paths=80, steps=60)
+    _, hits, runs = study.caught(plant, range(1, SEEDS + 1), shape=(80, 60))
     assert runs == SEEDS
     assert 108 <= hits < SEEDS
 
@@ -35,7 +35,7 @@ def test_half_the_size_is_not_found_nine_times_in_ten():
     # The study can fail: half the size lies more than one standard error below the point that p must pass.
     (plant,) = [plant for plant in QUICK if plant.what == "shocks: variance"]
     halved = study.Plant(plant.what, plant.probe, plant.stated, lambda d, *at: plant.plant(d / 2, *at))
-    _, hits, _ = study.caught(halved, range(1, 41), paths=80, steps=60)
+    _, hits, _ = study.caught(halved, range(1, 41), shape=(80, 60))
     assert hits < 20
 
 

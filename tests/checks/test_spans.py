@@ -17,7 +17,7 @@ HEAD = "procgen: 1\nseed: 1\npaths: {paths}\ntime: {{steps: {steps}}}\nseries:\n
 ROUNDED = "{round: {of: [{ar: {phi: PHI, total_sd: 2}}], to: 0.5}}"
 COUNTS = "{poisson: {mean: 4, of: [{ar: {phi: 0.9, total_sd: 0.4}}]}}"
 REGIMES = (
-    "{regimes: {branches: {calm: [{ar: {phi: 0.8, sd: 1}}], storm: [{white_noise: {sd: 4}}]}, "
+    "{regimes: {branches: {calm: [{ar: {phi: [0.7, 0.1], sd: 1}}], storm: [{white_noise: {sd: 4}}]}, "
     "durations: {calm: 40, storm: 8}}}"
 )
 

@@ -106,9 +106,7 @@ FAMILIES: Mapping[str, Any] = {
     "correlation by state": {
         "shared": {"market": [{"chain": {"states": ["calm", "stress"], "durations": {"calm": 20, "stress": 8}}}]},
         "series": {"x": [{"ar": {"phi": 0.6, "sd": 1}}], "y": [{"white_noise": {"sd": 2, "law": "laplace"}}]},
-        "correlation": [
-            {"between": ["x.ar", "y.white_noise"], "by": "market", "value": {"calm": 0.2, "stress": 0.8}}
-        ],
+        "correlation": [{"between": ["x.ar", "y.white_noise"], "by": "market", "value": {"calm": 0.2, "stress": 0.8}}],
     },
     "constant correlation": {
         "series": {

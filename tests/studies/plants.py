@@ -19,7 +19,7 @@ from scipy import integrate, optimize, stats
 from tests.studies.departures import Values, draw, spec_of
 
 PATHS, STEPS = 500, 200
-Planter = Callable[[float, int, int, int], Values]  # size, seed, paths, steps -> values
+Planter = Callable[[float, int, int, int], Any]  # size, seed, paths, steps -> values, or an ensemble
 
 
 @dataclass(frozen=True)
@@ -32,6 +32,8 @@ class Plant:
     plant: Planter
     series: str = "x"
     by: str = ""  # the parameter that is planted, in words
+    shape: tuple[int, int] = (PATHS, STEPS)
+    whole: bool = False  # planted is an ensemble, to be judged by all of `validate`
 
 
 def drawn(body_of: Callable[[float], Any]) -> Planter:

@@ -1,6 +1,6 @@
 """Is the printed "smallest departure caught 9 times in 10" true? Each check's own size is planted and counted.
 
-    python tests/studies/power.py [--seeds 200] [--only WHAT]
+    python tests/studies/power.py [--seeds 200] [--only WHAT] [--more]
 
 A true ensemble says what size each check finds 9 times in 10 at its share of the level. Exactly that size is planted,
 and the share of seeds with p at or below level / m is printed, m the number of checks that were judged.
@@ -23,6 +23,7 @@ from scipy import stats
 sys.path.insert(0, str(Path(__file__).resolve().parents[2]))
 
 from tests.studies.departures import SUM, Values, draw, spec_of, sums, verdict
+from tests.studies.planted_sizes import MORE, SEASON, tied, tied_phi
 from tests.studies.plants import (
     PATHS,
     STEPS,
@@ -59,11 +60,8 @@ LEVEL = 0.001
 WALK = [{"random_walk": {"sd": 1}}]
 FAT = [{"ar": {"phi": 0.7, "sd": 1}}, {"white_noise": {"sd": 0.5, "law": t(4)}}]
 GARCH = [{"garch": {"omega": 0.05, "alpha": 0.10, "beta": 0.85}}]
-SEASON = [{"seasonal": {"period": 12, "harmonics": [{"amplitude": 1, "peak": 3}]}}, {"white_noise": {"sd": 1}}]
 HEAVY = [{"constant": 0}, {"ar": {"phi": 0.6, "total_sd": 1, "law": t(9)}}, {"white_noise": {"sd": 0.5}}]
 COUNTS = [{"poisson": {"mean": 5}}]
-LONE = {"branches": {"a": [{"white_noise": {"sd": 1}}], "b": [{"white_noise": {"sd": 2}, "as": "wide"}]}}
-REGIMES = [{"regimes": {**LONE, "durations": {"a": 4, "b": 4}}}]
 
 
 def heavy(phi: float = 0.6, level: float = 0.0, times: float = 1.0) -> list[Any]:
@@ -136,18 +134,6 @@ def changed(stated: Any, change: Any) -> Any:
 
 LONG = [{"fractional_gaussian_noise": {"hurst": 0.7, "sd": 1}}, {"white_noise": {"sd": 1}}]
 LONG_MEAN = STEPS ** (2 * 0.7 - 2) + 1 / STEPS  # of fractional Gaussian noise the variance of a mean is n^(2H − 2)
-
-
-def tied(phi: float = 0.8) -> list[Any]:
-    """Counts whose intensity has log-variance 0.16: at lag k it has the covariance 16 (exp(0.16 φ^k) − 1)."""
-    return [{"poisson": {"mean": 4 / math.exp(0.08), "of": [{"ar": {"phi": phi, "total_sd": 0.4}}]}}]
-
-
-def tied_phi(size: float, lag: int) -> float:
-    """The φ at which the slope on the step `lag` earlier is larger by `size`; the variance of a count is 4 + Var m."""
-    variance = 4 + 16 * math.expm1(0.16)
-    slope = 16 * math.expm1(0.16 * 0.8**lag) / variance + size
-    return (math.log1p(slope * variance / 16) / 0.16) ** (1 / lag)
 
 
 def long_walk(sd: float = 0.3) -> list[Any]:
@@ -255,10 +241,11 @@ PLANTS = (
           by="φ, same variance"),
     Plant("prediction errors: neighbouring paths", "pairs", HEAVY,
           spoilt(HEAVY, lambda x, d, _: _paired(x, d)), by="pairs of paths mixed"),
-    Plant("neighbouring paths", "averages over steps", REGIMES, spoilt(REGIMES, lambda x, d, _: across(x, d)),
+    Plant("neighbouring paths", "averages over steps", LONG, spoilt(LONG, lambda x, d, _: across(x, d)),
           by="paths mixed with their neighbour"),
     Plant("shocks: variance", "all steps", SUM, drawn(lambda d: [
         {"random_walk": {"sd": 0.3 * _wider(1, d)}}, {"ar": {"phi": 0.5, "sd": _wider(1, d)}}]), by="both sd"),
+    *MORE,
 )  # fmt: skip
 
 
@@ -276,12 +263,15 @@ def _paired(x: np.ndarray, size: float) -> np.ndarray:
     return out
 
 
-def _checks(plant: Plant, gather: Any) -> Iterator[Any]:
+def _checks(plant: Plant, data: Any) -> Iterable[Any]:
     """The checks among which the plant's is, and hardly more: the others cost time and are not looked at."""
+    if plant.whole:
+        return _validated(plant, data).rows
     from procgen.checks.judge_shocks import cross_checks, shock_checks
     from procgen.checks.judgement import judged
     from procgen.checks.untied import untied_checks
 
+    gather = sums(plant.stated, data)
     pair = tuple(plant.series.split(" ~ "))
     if plant.what == "shocks: correlation between series":
         return cross_checks(plant.series, gather.cross[pair], gather.plan.shock_pairs[pair].at)
@@ -290,6 +280,14 @@ def _checks(plant: Plant, gather: Any) -> Iterator[Any]:
     if plant.what.startswith("shocks: ") and plant.series not in gather.led:
         return shock_checks(plant.series, gather.shocks[plant.series], "")
     return judged(gather)
+
+
+def _validated(plant: Plant, ensemble: Any) -> Any:
+    """The verdict on an ensemble that another seed has drawn."""
+    from procgen.checks.validate import validate
+
+    paths, steps = ensemble.spec.paths, ensemble.spec.time.steps
+    return validate(ensemble, spec_of(plant.stated, paths, steps, 2_000_003), LEVEL)
 
 
 def row_of(plant: Plant, rows: Iterable[Any]) -> Any:
@@ -302,42 +300,53 @@ def row_of(plant: Plant, rows: Iterable[Any]) -> Any:
 
 def size_of(plant: Plant, paths: int, steps: int) -> tuple[float, float] | None:
     """(the size that the check prints, the logarithm of its share of the level), from a true ensemble."""
-    answer = verdict(plant.stated, draw(spec_of(plant.stated, paths, steps, 1_000_003)), LEVEL)
+    true = spec_of(plant.stated, paths, steps, 1_000_003)
+    if plant.whole:
+        from procgen.ensemble import render
+
+        answer = _validated(plant, render(true, out=None))
+    else:
+        answer = verdict(plant.stated, draw(true), LEVEL)
     row = row_of(replace(plant, probe=plant.probe.split(": path")[0]), answer.rows)
     judged = sum(each.log_p is not None for each in answer.rows)
     return None if row is None or row.detectable is None else (row.detectable, math.log(LEVEL / judged))
 
 
-def caught(plant: Plant, seeds: range, paths: int = PATHS, steps: int = STEPS) -> tuple[float, int, int]:
-    """(size, times that the check had p at or below its share of the level, seeds)."""
+def caught(plant: Plant, seeds: range, shape: tuple[int, int] | None = None) -> tuple[float, int, int]:
+    """(size, times that the check had p at or below its share of the level, seeds); `shape` is (paths, steps)."""
+    paths, steps = shape or plant.shape
     found = size_of(plant, paths, steps)
     if found is None:
         return math.nan, 0, 0
     size, level = found
     hits = 0
     for seed in seeds:
-        row = row_of(plant, _checks(plant, sums(plant.stated, plant.plant(size, seed, paths, steps))))
+        row = row_of(plant, _checks(plant, plant.plant(size, seed, paths, steps)))
         hits += row is not None and row.log_p <= level
     return size, hits, len(seeds)
 
 
-def table(seeds: int, only: str = "") -> Iterator[str]:
+def table(seeds: int, only: str = "", more: bool = False) -> Iterator[str]:
     """Lines of a Markdown table, one a check."""
-    yield f"| check ({PATHS} × {STEPS}) | at | planted by | size | caught |"
+    yield f"| check ({PATHS} × {STEPS}, or as said) | at | planted by | size | caught |"
     yield "| --- | --- | --- | --- | --- |"
-    for plant in PLANTS:
+    for plant in MORE if more else PLANTS:
         if only in plant.what:
             size, hits, runs = caught(plant, range(1, seeds + 1))
             share = f"{100 * hits / runs:.0f} %" if runs else "not judged"
-            yield f"| {plant.what} | {plant.probe} | {plant.by} | {size:.3g} | {share} |"
+            at = plant.probe.removesuffix(" of") + (" of spans" if plant.probe.endswith(" of") else "")
+            if plant.shape != (PATHS, STEPS):
+                at += f" ({plant.shape[0]:,} × {plant.shape[1]:,})"
+            yield f"| {plant.what} | {at} | {plant.by} | {size:.3g} | {share} |"
 
 
 def main() -> None:
     parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
     parser.add_argument("--seeds", type=int, default=200)
     parser.add_argument("--only", default="", help="checks whose name contains this")
+    parser.add_argument("--more", action="store_true", help="plants of planted_sizes.py alone")
     options = parser.parse_args()
-    for line in table(options.seeds, options.only):
+    for line in table(options.seeds, options.only, options.more):
         print(line, flush=True)
 
 
