@@ -13,7 +13,8 @@ from procgen.checks import apart, judge, tails
 from procgen.checks.judge import Finding
 from procgen.checks.saddle import REACH, sum_finding
 from procgen.checks.scores import Scores, largest_gap
-from procgen.checks.shocks import CLUSTER_LAGS, CrossSums, ShockSums
+from procgen.checks.shocks import CLUSTER_LAGS, ShockSums
+from procgen.checks.together import CrossSums
 from procgen.checks.verdict import Check
 from procgen.checks.words import BALANCE, BY_PHASE
 

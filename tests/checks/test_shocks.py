@@ -12,7 +12,8 @@ from procgen.chance.laws import LAWS
 from procgen.checks import shocks
 from procgen.checks.judge_shocks import cross_checks, shock_checks
 from procgen.checks.scores import BINS, Scores
-from procgen.checks.shocks import CrossSums, ShockLane, ShockSums, _add_in_turn
+from procgen.checks.shocks import ShockLane, ShockSums, _add_in_turn
+from procgen.checks.together import CrossSums
 from procgen.checks.uniforms import bin_counts
 from tests.studies.departures import draw, spec_of, verdict
 
