@@ -229,13 +229,20 @@ class Outmost:
 class Pass:
     """One pass: `absorb` blocks, then ask for the `tree` of sums; paths that never reach the last step are left out."""
 
-    def __init__(self, plan: Plan, tick: Tick = lambda rows: None, compile: bool = False):
+    def __init__(
+        self,
+        plan: Plan,
+        tick: Tick = lambda rows: None,
+        compile: bool = False,
+        outmost: Outmost | None = None,
+    ):
+        """`outmost`: what other passes over the same data have seen, whose sums are added to those of this one."""
         keep_memory()
         self.plan, self.tick = plan, tick
         self.compile = compile and kernel.available()
         self.lanes: dict[int, Lane] = {}
         self.tree: Tree[Gather] = Tree()
-        self.outmost = Outmost()
+        self.outmost = Outmost() if outmost is None else outmost
 
     def absorb(self, first_path: int, first_step: int, values: Mapping[str, NDArray]) -> None:
         """Add a block. Raises ValueError when it does not follow the last one of its paths."""

@@ -10,6 +10,7 @@ import base64
 import contextlib
 import json
 import math
+import secrets
 import threading
 from collections.abc import Callable, Iterator, Mapping
 from typing import Any
@@ -18,7 +19,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.checks.gather import Gather, Plan
-from procgen.checks.lane import Pass, get_ready, repays
+from procgen.checks.lane import Outmost, Pass, get_ready, repays
 from procgen.checks.rectangles import Blocks, Values, first_values, grouped, named
 from procgen.ensemble import digest
 from procgen.ensemble.ensemble import OnDisk, open_ensemble
@@ -43,14 +44,15 @@ def tasks(
     for number, part in enumerate(ensemble.manifest.parts):
         chains.setdefault((part.block.first_path, part.block.end_path), []).append(number)
     shared["compile"] = repays(ensemble.whole.rows * len(columns) // min(workers, len(chains)))
-    return [{"shared": shared, "parts": numbers} for numbers in chains.values()]
+    run = secrets.token_hex(8)
+    return [{"shared": shared, "parts": numbers, "run": run} for numbers in chains.values()]
 
 
 def gather_chain(task: Mapping[str, Any], tick: Tick) -> list[dict[str, Any]]:
     """The record of one task: sums by range of paths, digest nodes by part, and what could not be read."""
     ensemble, plan = _context(task["shared"])
     chain = _Chain(ensemble, task["shared"]["columns"], task["parts"])
-    one = Pass(plan, tick, task["shared"]["compile"])
+    one = Pass(plan, tick, task["shared"]["compile"], _outmost(task["run"]))
     for first_path, first_step, values in chain.blocks():
         one.absorb(first_path, first_step, values)
     sums = [[first, end, *_packed(some)] for first, (end, some) in one.tree.nodes.items()]
@@ -75,6 +77,7 @@ def _packed(sums: Gather) -> tuple[dict[str, Any], bytes]:
 
 
 _CONTEXTS: dict[str, tuple[OnDisk, Plan]] = {}
+_OUTMOST: dict[str, Outmost] = {}
 _making = threading.Lock()
 
 
@@ -86,6 +89,15 @@ def plan_for(task: Mapping[str, Any]) -> Plan:
 def prepared(task: Mapping[str, Any]) -> None:
     """Make the plan and load what tasks need, so that workers forked from this process have both."""
     get_ready(plan_for(task), task["shared"]["compile"])
+
+
+def _outmost(run: str) -> Outmost:
+    """The values and shocks farthest out that this process has seen in a run over the data, of whichever tasks."""
+    with _making:
+        if run not in _OUTMOST:
+            _OUTMOST.clear()
+            _OUTMOST[run] = Outmost()
+        return _OUTMOST[run]
 
 
 def _context(shared: Mapping[str, Any]) -> tuple[OnDisk, Plan]:

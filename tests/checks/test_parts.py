@@ -12,6 +12,7 @@ import pytest
 
 from procgen.checks import source
 from procgen.checks.gather import Gather
+from procgen.checks.parts import _outmost, tasks
 from procgen.checks.rectangles import grouped
 from procgen.checks.validate import validate
 from procgen.ensemble import plan as cuts
@@ -185,3 +186,14 @@ def test_a_tick_for_every_row_of_all_workers(parts):
     validate(parts, workers=2, progress=lambda done, rows: ticks.append((done, rows)))
     assert ticks[-1] == (150 * 140, 150 * 140)
     assert ticks == sorted(ticks)
+
+
+def test_a_run_over_the_data_knows_nothing_of_what_another_saw(tmp_path, monkeypatch):
+    """Values may have been mended since: those farthest out are those of this run."""
+    ensemble = cut(WIDE, tmp_path / "out", monkeypatch, 200_000)
+    columns = {name: name for name in ensemble.names}
+    one, other = (tasks(ensemble, read_spec(WIDE), columns, True) for _ in range(2))
+    assert len({task["run"] for task in one}) == 1 and one[0]["run"] != other[0]["run"]
+    kept = _outmost(one[0]["run"])
+    assert _outmost(one[0]["run"]) is kept
+    assert _outmost(other[0]["run"]) is not kept
