@@ -11,8 +11,8 @@ goes through the values and leaves sums (`gather`); `judgement` makes checks of 
   (long paths, cut).
 - Sums. Their order, which no cut into parts may change: `blocks`, `tree`. Of values: `sums`, `structure`, `grids`,
   `copies`, `prints`, `repeated`, `extremes`. Of shocks: `scores` and `uniforms`, `shocks`, `stretches`, `farthest`,
-  `pairs`, `tied` and `untied`. Of what has no such shocks: `errors`, `squares`, `neighbours`, `log_sizes`, `slow`,
-  `waves`, `special`, `led`. Over paths and their order: `apart`, `start`, `masks`, `ordered`.
+  `together`, `pairs`, `tied` and `untied`. Of what has no such shocks: `errors`, `squares`, `neighbours`, `log_sizes`,
+  `slow`, `waves`, `special`, `led`. Over paths and their order: `apart`, `start`, `masks`, `ordered`.
 - The same, compiled: `strips` and `fused` (wide tiles), `fused_few` (few paths), `crossed` (pairs), `stepped`.
 - Judging. `judge` makes findings, with `judge_moments`, `judge_pools` and `judge_shocks` for the tests of each kind;
   `limits`, `tails` and `saddle` give p-values, `power` the sizes that would be found.

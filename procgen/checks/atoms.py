@@ -16,6 +16,9 @@ _HOLDING = frozenset({"clip", "hinge", "min", "max", "flag", "chain", "regimes",
 _RESTING = frozenset({"intermittent", "zero_inflated", "compound_poisson"})  # kinds whose draws show now and then
 
 
+_OF_FEW = frozenset({"poisson", "negative_binomial", "inar", "flag", "chain", "round", "floor", "ceiling"})
+_OF_FEW |= _RESTING | {"moving_blocks"}
+_CHOOSING = frozenset({"regimes", "schedule", "product"})  # kinds of which one part alone may be all that is seen
 _FAR = 7.0  # standard deviations that a body without a law may be off its mean
 
 
@@ -78,6 +81,22 @@ def may_stay(theory: Any, graph: Any, name: str, flat: frozenset[str] = frozense
     made = (PROCESS, OPAQUE)  # of others, in some way
     bent = {inner.key for source in theory.expression.sources if source.kind in made for inner in _inside(source)}
     return all(source.kind in made or source.key in bent for source in sources)
+
+
+def made_of_few(graph: Any, name: str) -> bool:
+    """Whether all that chance brings to a path of a series may be few values, so that another path may be the same."""
+    return _made_of_few(graph, graph.series[name])
+
+
+def _made_of_few(graph: Any, node: Any) -> bool:
+    if isinstance(node, Source):
+        return node.law.points is not None
+    if not any(isinstance(part, Source) for part in graph.order([node])):
+        return True
+    parts = [_made_of_few(graph, part) for part in node.inputs]
+    if node.term.kind in _OF_FEW:
+        return True
+    return any(parts) if node.term.kind in _CHOOSING else all(parts)
 
 
 def few_shocks(theory: Any) -> Any | None:

@@ -35,16 +35,17 @@ class Few:
         return not _SURE * noise**0.5 <= self.within
 
 
-def few_of(law: Any, carrier: Any, grain: float) -> tuple[Few | None, float]:
+def few_of(law: Any, carrier: Any, grain: float, blurred: bool = False) -> tuple[Few | None, float]:
     """How the shocks that a carrier gives of rounded values are told apart, and the rounding that is left to them.
 
     Where a shock is a shift and a scale of its value, the cell of a stored value holds all that is stored so: exactly.
-    Else a shock is the nearest of the values.
+    Else a shock is the nearest of the values, as it is where what is undone gives it back only up to rounding
+    (`blurred`).
     """
     if law.points is None:
         return None, grain
     if not grain:
-        return Few(law.points), 0.0
+        return Few(law.points, 0.49 * law.points.spacing if blurred else 0.0), 0.0
     rows = np.zeros((2, 2))
     rows[0, 1] = grain / 2  # the second path is moved by half a cell at the first step
     z = carrier.tile(rows)

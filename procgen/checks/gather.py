@@ -20,13 +20,14 @@ from procgen.checks.neighbours import Neighbours
 from procgen.checks.probes import CrossPlan, SeriesPlan
 from procgen.checks.recover import Cannot, Expected, Route, dither
 from procgen.checks.relations import Relation
-from procgen.checks.shocks import FAR, MEMORY_LAGS, NEAR, SHOCK_ARRAYS, CrossSums, ShockSums
+from procgen.checks.shocks import MEMORY_LAGS, SHOCK_ARRAYS, ShockSums
 from procgen.checks.special import EventSums
 from procgen.checks.squares import Squares
 from procgen.checks.start import comparable, differences, told_apart
 from procgen.checks.structure import Precision, Structure
 from procgen.checks.sums import Kept, Moments, Powers
 from procgen.checks.tied import TiedSums
+from procgen.checks.together import FAR, NEAR, CrossSums
 from procgen.checks.untied import UntiedSums
 
 

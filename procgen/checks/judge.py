@@ -273,13 +273,18 @@ def of_scale(finding: Finding) -> Finding:
     return replace(finding, detect=detect)
 
 
-def of_products(finding: Finding, sample: Sample, times: float = 1.0) -> Finding:
+def of_products(finding: Finding, sample: Sample, times: float = 1.0, wider: float = 1.0) -> Finding:
     """The finding of a mean product without a known sd: no size is promised where what departs could be too skewed.
 
-    Products of values that follow each other more closely are more skewed than those that were seen.
+    Products of values that follow each other more closely are more skewed than those that were seen, and `wider`.
     """
     gauge, plain = _STEADY * times * abs(sample.skew) / (3 * math.sqrt(sample.n)), finding.detect
-    return replace(finding, detect=lambda level: None if gauge * power.needed(level) ** 3 > 1.0 else plain(level))
+
+    def detect(level: float) -> float | None:
+        size = plain(level)
+        return None if size is None or gauge * power.needed(level) ** 3 > 1.0 else wider * size
+
+    return replace(finding, detect=detect)
 
 
 def reach_of_worst(level: float, n: int) -> float:

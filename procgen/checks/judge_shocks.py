@@ -13,7 +13,8 @@ from procgen.checks import apart, judge, tails
 from procgen.checks.judge import Finding
 from procgen.checks.saddle import REACH, sum_finding
 from procgen.checks.scores import Scores, largest_gap
-from procgen.checks.shocks import CLUSTER_LAGS, CrossSums, ShockSums
+from procgen.checks.shocks import CLUSTER_LAGS, ShockSums
+from procgen.checks.together import CrossSums
 from procgen.checks.verdict import Check
 from procgen.checks.words import BALANCE, BY_PHASE
 
@@ -89,7 +90,8 @@ def _lag_finding(chains: Counter[int], lag: int, pairs: int, total: float) -> Fi
     """Sum of g[t] g[t-lag] over runs of the given lengths: a quadratic form in normals."""
     if pairs >= _EXACT_BELOW:
         return judge.unit(total / math.sqrt(pairs), 1 / math.sqrt(pairs))
-    weights, dof = _chain_weights(chains, lag)
+    without_gaps = pairs == sum(paths * max(length - lag, 0) for length, paths in chains.items())
+    weights, dof = _chain_weights(chains, lag) if without_gaps else _one_chain_weights(sum(chains.values()), pairs)
     upper, lower = tails.weighted_chi_squares(total, weights, dof)
     plain = judge.unit(total / math.sqrt(pairs), 1 / math.sqrt(pairs))
     return Finding(0.0, total / pairs, plain.standard_error, tails.two_sided(upper, lower), plain.detect)
@@ -101,9 +103,22 @@ def _chain_weights(chains: Counter[int], lag: int) -> tuple[NDArray, NDArray]:
     for length, paths in chains.items():
         links: Counter[int] = Counter(len(range(start, length, lag)) for start in range(min(lag, length)))
         for m, count in links.items():
-            weights.append(np.cos(np.pi * np.arange(1, m + 1) / (m + 1)))
+            weights.append(_eigenvalues(m))
             dof.append(np.full(m, float(count * paths)))
     return np.concatenate(weights), np.concatenate(dof)
+
+
+def _one_chain_weights(paths: int, pairs: int) -> tuple[NDArray, NDArray]:
+    """The same where shocks are missing here and there: as if all pairs of a path were links of one chain.
+
+    Their number gives the variance; how they hang together is not kept, and no other way has tails as long.
+    """
+    links = math.ceil(pairs / paths)
+    return _eigenvalues(links + 1), np.full(links + 1, pairs / links)
+
+
+def _eigenvalues(m: int) -> NDArray:
+    return np.cos(np.pi * np.arange(1, m + 1) / (m + 1))
 
 
 def _stretches(series: str, sums: ShockSums) -> Iterator[Check]:

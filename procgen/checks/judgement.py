@@ -126,7 +126,7 @@ def _none_recovered(way: Route, gather: Gather) -> str:
 
 
 def _chance_of_equal(series: SeriesPlan, plan: Plan) -> float:
-    """Probability that two paths of a series are equal by rounding; 0 where values are not rounded."""
+    """Probability that two paths of a series are equal: 0 where chance parts them, 1 where that is not known."""
     few = few_shocks(series.theory)
     if few is not None and not series.grain:
         return few.same**plan.steps
@@ -135,8 +135,10 @@ def _chance_of_equal(series: SeriesPlan, plan: Plan) -> float:
     step = plan.precision[plan.names.index(series.name)].possible.support.step
     if lumpy(series.theory):
         return _equal_lumps(series, step, plan.steps)
-    if step and not series.grain:
-        return _equal_on_lattice(series, step, plan.steps)
+    if step:
+        return _equal_on_lattice(series, max(step, series.grain), plan.steps)
+    if series.of_few:
+        return 1.0
     if not np.isfinite(series.variance).all():
         return 0.0
     moving = int(np.count_nonzero(series.drawn > 0))

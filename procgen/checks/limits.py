@@ -57,8 +57,6 @@ def limit(
         note = few_paths(sample.n, FEW_PATHS)
         return Check(plan.name, what, probe, kind, theory, theory + sample.mean, outcome="reported", note=note)
     finding = judge.sample_mean(sample, theory, sd, hidden)
-    if sd is None and order == 2:
-        finding = judge.of_products(finding, sample)
     if kind == "spread":
         finding = judge.of_scale(finding)
     return Check.of(plan.name, what, probe, kind, finding)
@@ -74,14 +72,16 @@ def clustering(
     least: int = FEW_PATHS,
     times: float = 1.0,
     grows: bool = False,
+    wider: float = 1.0,
 ) -> Check:
     """A check of clustering by averages along paths, of which there must be `least`; `times` as for `sample_mean`.
 
-    grows: whether an estimate above theory is the less certain, as one of a spread is.
+    grows: whether an estimate above theory is the less certain, as one of a spread is. wider: how many times as far
+    apart the averages are where clustering is as much stronger as is found.
     """
     sample = sample_of(powers, k)
     if sample.n < least or sample.sd == 0.0:
         estimate, note = theory + sample.mean, few_paths(sample.n, least)
         return Check(series, what, probe, "clustering", theory, estimate, outcome="reported", note=note)
-    finding = judge.of_products(judge.sample_mean(sample, theory, times=times), sample, times)
+    finding = judge.of_products(judge.sample_mean(sample, theory, times=times), sample, times, wider)
     return Check.of(series, what, probe, "clustering", judge.of_scale(finding) if grows else finding)

@@ -9,7 +9,8 @@ from numpy.typing import NDArray
 
 from procgen.chance.kernel import machine
 from procgen.checks.blocks import compiled
-from procgen.checks.shocks import NEAR, CrossSums, ShockLane
+from procgen.checks.shocks import ShockLane
+from procgen.checks.together import NEAR, CrossSums
 from procgen.checks.untied import SIZES, UntiedSums
 
 _ROWS = len(NEAR) + 1  # totals of a usual pair: one for each lag, and that of the sizes

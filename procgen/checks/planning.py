@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping
 from itertools import combinations
 from typing import Any
@@ -9,7 +10,7 @@ from typing import Any
 import numpy as np
 
 from procgen.checks import missing, repeated
-from procgen.checks.atoms import flattened, known_within, may_stay
+from procgen.checks.atoms import flattened, known_within, made_of_few, may_stay
 from procgen.checks.copies import repeats_of
 from procgen.checks.extremes import Reach
 from procgen.checks.gather import Plan
@@ -22,6 +23,10 @@ from procgen.checks.special import lumpy
 from procgen.checks.squares import plan_squares
 from procgen.checks.structure import Precision
 from procgen.checks.support import possible_of, vanishes
+from procgen.terms.supports import support_of
+from procgen.theory.lumps import atoms_of
+
+_OFF = 1e-9  # of its size, that a value may be off a grid and lie on it
 
 
 def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True, paths: int | None = None) -> Plan:
@@ -40,7 +45,7 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True, paths:
     series, routes, precision = [], {}, []
     for name, declared in spec.series.items():
         doubles = rounding_of(th, name, steps)
-        grain = max(_grain(declared, th[name], steps), 0.0 if doubles is None else doubles.cell)
+        grain = max(_grain(declared, th[name], graph.series[name], steps), 0.0 if doubles is None else doubles.cell)
         lost = str(doubles) if doubles is not None and doubles.hides else beyond_doubles(th, name, steps)
         found = Cannot(lost) if lost else route(name, th[name], graph, grain, same_draws, (paths, steps))
         routes[name] = way = in_doubles(found, doubles)
@@ -49,7 +54,7 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True, paths:
         plan = plan_series(name, th[name], steps, grain, _periods(graph, name), _unseen(way), lost)
         flat = flattened(th, name, steps)
         plan.may_stay = bool(lost) or may_stay(th[name], graph, name, flat)
-        plan.smooth = smooth(graph, name, steps, flat)
+        plan.smooth, plan.of_few = smooth(graph, name, steps, flat), made_of_few(graph, name)
         plan.within = known_within(th, name, steps)
         series.append(plan)
         stored = _precision(declared, graph, plan, bool(flat), steps, spec.paths * steps)
@@ -65,20 +70,29 @@ def plan_of(spec: Any, steps: int | None = None, same_draws: bool = True, paths:
     return missing.adapted(whole, gaps) if gaps else whole
 
 
-def _grain(declared: Any, theory: Any, steps: int) -> float:
+def _grain(declared: Any, theory: Any, node: Any, steps: int) -> float:
     """The distance of neighbouring values as stored: of decimals, whole numbers, or float32.
 
-    0 where chance only chooses among few values: rounding then spreads nothing, least of all over a cell.
+    0 where chance only chooses among few values, stored as they are: nothing is spread, least of all over a cell.
     """
-    if theory.discrete:
-        return 0.0
     grain = 10.0 ** -(declared.decimals or 0) if declared.decimals is not None or declared.type == "int64" else 0.0
     if declared.type == "float32":  # far from 0 its spacing is wider than the decimals
         at = np.array([0, steps // 2, steps - 1])
         mean, variance = theory.mean(at), theory.variance(at)
         reach = np.abs(mean if mean is not None else 1.0) + 3 * np.sqrt(variance if variance is not None else 1.0)
         grain = max(grain, float(np.spacing(np.float32(np.max(reach)))))
-    return grain
+    return 0.0 if theory.discrete and (not grain or _on_grid(theory, node, grain, steps)) else grain
+
+
+def _on_grid(theory: Any, node: Any, grain: float, steps: int) -> bool:
+    """Whether the few values of a series are multiples of a grain, by their laws or by what its terms can give."""
+    laws = [theory.marginal(step) for step in (0, steps // 2, steps - 1)]
+    if None in laws:
+        numbers = [support_of(node).step or math.nan]
+    else:
+        numbers = [x for law in laws for x in (law.ppf(0.5), getattr(law, "spacing", 0.0), *atoms_of(law))]
+    places = np.array(numbers, float) / grain
+    return bool(np.all(np.abs(places - np.rint(places)) <= _OFF * np.maximum(1.0, np.abs(places))))
 
 
 def _periods(graph: Any, name: str) -> list[int]:

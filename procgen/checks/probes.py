@@ -76,6 +76,7 @@ class SeriesPlan:
         self.coarse = np.zeros(len(self.steps), dtype=bool)  # probes hidden by rounding
         self.may_stay = False  # whether two paths may be equal by chance, for their values can be held
         self.smooth = True  # whether by its terms no value lies on a grid
+        self.of_few = False  # whether all that chance brings to it may be few values
         self.within = 0.0  # the largest of the known numbers that it is made of
         self._skewness: dict[int, float] = {}
 

@@ -205,7 +205,8 @@ def route(
             return replace(way, hidden=isinstance(term, HiddenStates))
         return _by_projection(name, theory, graph, grain, undone.reason if ranks is None else ranks.reason)
     words = f"recovered by undoing {name} down to {undone.source.name}"
-    few, left = few_of(undone.source.law, recovery(graph, name, 2), grain)
+    blurred = any(node.term.blurs for node in undone.nodes)
+    few, left = few_of(undone.source.law, recovery(graph, name, 2), grain, blurred)
     if few is not None:
         scores, words = Scores(LAWS["uniform"](), FEW), f"ranks of the shocks, {words}"
         return Route(name, scores, words, theory, graph, left, source=undone.source, few=few)

@@ -25,6 +25,7 @@ from procgen.checks.verdict import Check
 LAGS = (1, 2, 4, 8, 16, 32)  # up to a quarter of the steps
 _ORDER = 4  # a square times a square
 _FEW = 5 * FEW_PATHS  # skewed sums of 200 paths by 100 steps were seen to hide all of their skewness
+_WIDER = 1.05  # times the spread of averages where stays in regimes last longer (tests/studies/power.py)
 _MANY = 200  # steps over which the average of a path has met more of its tail
 
 
@@ -139,4 +140,4 @@ class SquareSums:
             estimate = theory + sample_of(self.powers, k).mean
             note = f"moments exist only below order {self.plan.highest:g}: no central limit theorem reaches far enough"
             return Check(series, what, probe, "clustering", theory, estimate, outcome="untestable", note=note)
-        return clustering(series, what, probe, self.powers, k, theory, _FEW, times)
+        return clustering(series, what, probe, self.powers, k, theory, _FEW, times, wider=_WIDER)

@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.checks import judge
-from procgen.checks.shocks import CrossSums
+from procgen.checks.together import CrossSums
 from procgen.checks.verdict import Check
 
 SHARE = 0.01  # the tails that are counted

@@ -15,7 +15,8 @@ from numpy.typing import NDArray
 
 from procgen.checks import judge
 from procgen.checks.blocks import across, add_lagged
-from procgen.checks.shocks import NEAR, CrossSums, ShockLane
+from procgen.checks.shocks import ShockLane
+from procgen.checks.together import NEAR, CrossSums
 from procgen.checks.verdict import Check
 
 FIRST, LAST = 3, 12  # lags that are looked at together; scores are held for as long

@@ -70,7 +70,7 @@ def whole_page(gallery: Gallery | None, verdict: Verdict | None = None, day: dat
     """A page of pictures, of a verdict, or of both."""
     about = verdict.about if verdict is not None else {}
     title = escaped(about.get("title") or (gallery.title if gallery else "") or "Verdict")
-    judged = f" – {_TITLES[verdict.verdict]}" if verdict is not None else ""
+    judged = f" – {_said(verdict)}" if verdict is not None else ""
     parts = [
         "<!doctype html>",
         f'<html lang="en"><head><meta charset="utf-8">{MARKS["html"]}',
@@ -97,9 +97,15 @@ def whole_page(gallery: Gallery | None, verdict: Verdict | None = None, day: dat
     return "\n".join([*parts, f"</main><footer>{cautions}</footer></body></html>", ""])
 
 
+def _said(verdict: Verdict) -> str:
+    """The verdict in a few words."""
+    partly = verdict.verdict == "agrees" and any(each.missing for each in verdict.coverage)
+    return "Agrees in part: not all could be judged" if partly else _TITLES[verdict.verdict]
+
+
 def _lead(verdict: Verdict, day: date | None) -> Iterator[str]:
     about = verdict.about
-    yield f'<p class="verdict {verdict.verdict}">{_TITLES[verdict.verdict]}</p>'
+    yield f'<p class="verdict {verdict.verdict}">{_said(verdict)}</p>'
     if judged := _judged(verdict, day):
         yield f'<p class="facts">{breakable(judged)}.</p>'
     size = f"{many(about['paths'], 'path')} × {many(about['steps'], 'step')}. " if "paths" in about else ""

@@ -88,7 +88,8 @@ class Affine:
     @property
     def atoms(self) -> tuple[float, ...]:
         """The values with a chance of their own beside others."""
-        return tuple(sorted(self.location + self.scale * x for x in atoms_of(self.law)))
+        found = (self.location + self.scale * x for x in atoms_of(self.law))
+        return tuple(sorted(0.0 if abs(x) <= ROUNDING * abs(self.location) else x for x in found))
 
     def chance(self, x):
         """P(X = x)."""

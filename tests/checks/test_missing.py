@@ -129,3 +129,21 @@ def test_a_share_drawn_by_path_is_not_judged_as_one_share():
     body = {"x": [{"missing": {"of": AR, "share": share}}]}
     verdict = pg.validate(pg.render(HEAD | {"series": body}), false_alarm=1e-8)
     assert verdict.agrees and "its share or length is drawn by path: not judged" in verdict.text()
+
+
+def test_rows_left_out_are_the_missing_values_that_are_stated():
+    """A long table often has no row where there is no value: told, and judged by the stated share and length."""
+    frame = pg.render(spec()).to_pandas()
+    frame = frame[frame["x"].notna()]
+    verdict = pg.validate(frame, spec())
+    (row,) = [r for r in verdict.rows if r.what == "every path and step once"]
+    assert verdict.agrees and "judged as missing values" in row.note
+    fewer = pg.validate(frame, spec(share=0.02))
+    assert fewer.agrees is False and "rate of new gaps: larger than stated" in fewer.headline[0]
+
+
+def test_rows_left_out_are_told_where_a_series_states_no_missing_values():
+    both = HEAD | {"series": {"x": [{"missing": {"of": AR, "share": 0.05, "gap": 4}}], "y": AR}}
+    frame = pg.render(pg.load(both)).to_pandas()
+    notes = [r.note for r in pg.validate(frame.drop(index=[500]), pg.load(both)).rows if r.outcome == "departs"]
+    assert any(note.startswith("1 row is missing") for note in notes)

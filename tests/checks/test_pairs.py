@@ -9,7 +9,8 @@ from procgen.chance import kernel
 from procgen.chance.laws import LAWS
 from procgen.checks.pairs import Pairs
 from procgen.checks.scores import Scores
-from procgen.checks.shocks import FAR, CrossSums, ShockSums
+from procgen.checks.shocks import ShockSums
+from procgen.checks.together import FAR, CrossSums
 from procgen.checks.untied import UntiedSums
 
 STEPS, NAMES = 300, ("a", "b", "c", "d", "e")

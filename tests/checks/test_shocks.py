@@ -12,7 +12,8 @@ from procgen.chance.laws import LAWS
 from procgen.checks import shocks
 from procgen.checks.judge_shocks import cross_checks, shock_checks
 from procgen.checks.scores import BINS, Scores
-from procgen.checks.shocks import CrossSums, ShockLane, ShockSums, _add_in_turn
+from procgen.checks.shocks import ShockLane, ShockSums, _add_in_turn
+from procgen.checks.together import CrossSums
 from procgen.checks.uniforms import bin_counts
 from tests.studies.departures import draw, spec_of, verdict
 
@@ -185,6 +186,20 @@ def test_steps_that_share_an_entry_are_added_one_after_another(first, count):
     _add_in_turn(row, values, first, width)
     np.testing.assert_array_equal(row, expected)
     np.testing.assert_array_equal(found, expected)
+
+
+@pytest.mark.parametrize("lag", [3, 6, 12])
+def test_products_of_shocks_that_come_every_third_step_are_calibrated(lag):
+    """Few pairs are judged by an exact law, which must know how many there are: 400 sets of 30 paths."""
+    p = []
+    for seed in range(400):
+        z = np.full((40, 30), np.nan)
+        z[::3] = np.random.default_rng([seed, lag]).standard_normal((14, 30))
+        rows = [row for row in shock_checks("x", summed(z), "") if row.what == "shocks: autocorrelation"]
+        p += [row.p for row in rows if row.probe == f"lag {lag}"]
+    for level, most in ((0.1, 72), (0.01, 18)):  # of 400; more by chance at most once in a million times (binomial)
+        assert len(p) == 400 and np.count_nonzero(np.array(p) <= level) <= most
+    assert np.count_nonzero(np.array(p) <= 0.1) >= 13
 
 
 @pytest.mark.parametrize("paths", [2, 15, 16, 17, 31, 48])

@@ -77,6 +77,14 @@ def test_what_a_page_holds_and_in_which_order():
     assert "@media print" in text and "prefers-color-scheme: dark" in text and 'name="viewport"' in text
 
 
+def test_a_page_says_first_whether_all_could_be_judged():
+    heavy = {"exp": [{"white_noise": {"sd": 0.1, "law": {"student_t": {"df": 5}}}}]}
+    for body, said in (([heavy, {"ar": {"phi": 0.5, "sd": 1}}], "Agrees in part"), (AR, "Agrees with its spec")):
+        verdict = pg.validate(ensemble({"x": body}, paths=120), false_alarm=1e-8)
+        text = verdict_page(verdict)
+        assert verdict.verdict == "agrees" and f'class="verdict agrees">{said}' in text
+
+
 @pytest.mark.parametrize("file", sorted(SPECS.glob("*.yaml"))[::4], ids=lambda file: file.stem)
 def test_every_fourth_spec_of_the_gallery_has_pictures(file):
     spec = pg.load(file)

@@ -17,7 +17,8 @@ from procgen.chance.laws import LAWS
 from procgen.checks import apart, farthest, judge_shocks, untied
 from procgen.checks.judge import Finding
 from procgen.checks.scores import BINS, Scores, cluster_scores
-from procgen.checks.shocks import CrossSums, ShockLane, ShockSums
+from procgen.checks.shocks import ShockLane, ShockSums
+from procgen.checks.together import CrossSums
 from tests.studies.calibration import Findings, of_one_number
 from tests.studies.calibration_draws import Draw, Rng, nothing
 

@@ -196,7 +196,7 @@ MORE = (
         lambda d: tied(0.8, 20, tied_sd(d, *_MANY))), by="sd of an intensity", **_SPANS),
     *(Plant("slope over steps", f"steps 0–63, lag {lag} of", tied(0.8, *_MANY), rendered(
         lambda d, lag=lag: tied(tied_phi(d, lag, *_MANY), *_MANY)), by="φ of an intensity", **_SPANS)
-      for lag in (1, 4)),
+      for lag in (1, 16)),
     Plant(f"{_LEVEL}distribution function", "all paths", normal_level(),
           rendered(lambda d: normal_level(gap_shift(d))), "", by="mean of the drawn law", shape=(500, 20), whole=True),
     Plant(f"{_LEVEL}share of 1", "all paths", chosen_level(), rendered(lambda d: chosen_level(0.2 + d)), "",
