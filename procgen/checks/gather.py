@@ -271,7 +271,7 @@ def _products(plan: Plan, rows: NDArray) -> NDArray:
         if not series.unknown and known is not None and np.isfinite(known):
             if i == j or series.product_sd.get((i, j)) is not None:
                 out[:, k] = rows[:, at + i] * rows[:, at + j] - known
-            elif not series.constant[i]:
+            elif not series.constant[i] and not series.coarse[i]:  # coarse rounding may leave a variance of 0
                 out[:, k] = rows[:, at + i] * (rows[:, at + j] - known / series.variance[i] * rows[:, at + i])
     return out
 
@@ -296,10 +296,11 @@ def _cross_products(plan: Plan, rows: NDArray) -> NDArray:
     """Products of two series beside the stated slope of the first on the second."""
     columns = []
     for pair in plan.cross:
-        variance = plan.series[pair.second].variance
+        first, second = plan.series[pair.first], plan.series[pair.second]
+        variance = second.variance
         for (i, j), known in zip(pair.places, pair.covariance, strict=True):
             a, b = rows[:, plan.offset[pair.first] + i], rows[:, plan.offset[pair.second] + j]
-            usable = known is not None and variance[j] > 0
+            usable = known is not None and variance[j] > 0 and not (first.coarse[i] or second.coarse[j])
             columns.append(b * (a - known / variance[j] * b) if usable else np.full(len(rows), np.nan))
     return np.array(columns).T if columns else np.zeros((len(rows), 0))
 

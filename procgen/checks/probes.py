@@ -275,12 +275,15 @@ def _moves(law: Any) -> bool:
 
 
 def _laws_alone(plan: SeriesPlan) -> None:
-    """Known laws at three of the probes of a series without moments: about the median, by the quartiles."""
+    """Known laws at three of the probes of a series without moments: about the median, by the quartiles.
+
+    Where a bend has put both quartiles on one value, by all that the law reaches; of one value for certain, by 1.
+    """
     for i in sorted({0, len(plan.steps) // 2, len(plan.steps) - 1}):
         law = plan.theory.marginal(int(plan.steps[i]))
         if law is not None:
-            low, middle, high = law.ppf(np.array([0.25, 0.5, 0.75])).tolist()
-            plan.scores[i] = Scores(Marginal(partial(_same, law), middle, high - low))
+            least, low, middle, high, most = law.ppf(np.array([_NEVER, 0.25, 0.5, 0.75, 1.0 - _NEVER])).tolist()
+            plan.scores[i] = Scores(Marginal(partial(_same, law), middle, (high - low) or (most - least) or 1.0))
 
 
 def _same(law: Any) -> Any:

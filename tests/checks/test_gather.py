@@ -141,3 +141,17 @@ def test_what_is_known_to_lie_farther_elsewhere_changes_no_sum():
     assert len(together.outmost.shocks["x"]) == farthest.KEPT
     assert together.total().structure.far == alone.structure.far
     assert together.total().shocks["x"].far == alone.shocks["x"].far
+
+
+@pytest.mark.filterwarnings("error")
+def test_rounding_that_leaves_one_value_is_not_divided_by():
+    """Stored are 4s, where the walk lies near 3.9 with an sd of 0.01: its rounded variance underflows to 0."""
+    walk = {"of": [{"random_walk": {"sd": 0.01, "drift": -5e-5, "start": 3.9}}], "decimals": 0}
+    noise = [{"white_noise": {"sd": 1, "law": {"student_t": {"df": 5}}}}]
+    for series in ({"a": walk}, {"b": noise, "a": walk}):
+        spec = spec_of({"series": series}, 500, 8, 295)
+        plan, values = plan_of(spec), draw(spec)
+        assert plan.series[-1].variance[1] == 0 < plan.series[-1].drawn[1]
+        rows = [row for row in judged(gathered(plan, [(0, 0, values)])) if row.series.endswith("a")]
+        notes = [row for row in rows if row.what.startswith("covariance")]
+        assert notes and all(row.outcome == "untestable" and "too coarse" in row.note for row in notes)

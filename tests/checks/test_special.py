@@ -150,3 +150,25 @@ def test_what_hides_the_past_is_said():
     found = pg.validate(table, spec(TRUE["moving counts"]))
     (row,) = [row for row in found.rows if row.what == "recovered shocks"]
     assert row.note == "x.poisson follows x.ar, which moves by chance and is not seen"
+
+
+@pytest.mark.filterwarnings("error")
+@pytest.mark.parametrize(
+    "bend",
+    [
+        {"clip": {"of": [{"poisson": {"mean": 4}}], "low": -1, "high": 3}},
+        {"hinge": {"of": [{"negative_binomial": {"mean": 0.3, "size": 0.3}}], "below": 1}},
+        {"clip": {"of": [{"poisson": {"mean": 4}}], "low": -2, "high": -1}},
+    ],
+    ids=["mostly at its end", "mostly at its kink", "at its end for certain"],
+)
+def test_a_bent_count_with_both_quartiles_on_one_value_is_judged_beside_another_series(bend):
+    stated = spec(bend)
+    stated["series"] = {"a": [{"white_noise": {"sd": 1}}], **stated["series"]}
+    true = pg.validate(pg.render(stated), false_alarm=FALSE_ALARM)
+    assert true.verdict == "agrees", true.to_text()
+    between = [row for row in true.rows if row.series == "a ~ x"]
+    assert between and all(row.note for row in between if row.outcome == "untestable")
+    table = pg.render(stated).to_pandas()
+    table.loc[table["step"] == 0, "x"] -= 1
+    assert pg.validate(table, stated, false_alarm=FALSE_ALARM).verdict == "departs"
