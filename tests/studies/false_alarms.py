@@ -1,6 +1,7 @@
 """How often true ensembles are said to depart, by family of specs, shape and level.
 
-    python tests/studies/false_alarms.py [--quick] [--seeds 2000] [--only FAMILY] [--workers 2] [--out FILE [--resume|--so-far]]
+    python tests/studies/false_alarms.py [--quick] [--seeds 2000] [--only FAMILY] [--workers 2] [--out FILE]
+        [--resume | --so-far]
 
 Every run draws an ensemble exactly as stated and judges it. Printed in Markdown: the share flagged at each level with
 its 99.9 % binomial interval, by family and pooled, and how often each kind of check had a small p. With --out, each
