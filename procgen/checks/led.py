@@ -4,6 +4,9 @@ If g is normal and independent of the past, and the weight w is a function of th
 sum of w² reaches a fixed t is exactly normal with variance t: exp(iuS + u²V/2) is a martingale (Dubins & Schwarz 1965
 for what is continuous). The weight of the last term is cut so that t is met; where a path ends before that, what is
 left is filled with a normal number of its own. So few and short paths are judged by an exact law, too.
+
+Of a path whose first value has no rank, as where a filter's past is not known, ranks are given less than its values:
+they are independent of each other and not of that value, which stays in those that follow. It is left out.
 """
 
 from __future__ import annotations
@@ -33,11 +36,15 @@ def led(plan: Any, way: Any) -> bool:
 
 
 class LedLane:
-    """What is carried for one range of paths: the last weight, the sums of squared weights and of products, by path."""
+    """What is carried for one range of paths: the last weight, the sums of squared weights and of products, by path.
+
+    `whole`: the paths whose ranks are given all values before.
+    """
 
     def __init__(self, paths: int, first_path: int):
         self.first_path = first_path
         self.weight, self.squares, self.total = np.zeros((3, paths))
+        self.whole = np.zeros(paths, dtype=bool)
 
 
 class LedSums:
@@ -62,6 +69,8 @@ class LedSums:
         scores = np.full(x.shape, np.nan)
         scores[len(x) - len(g) :] = g
         known = np.isfinite(scores)
+        if first_step == 0:
+            lane.whole = known[0].copy()
         used = np.where(known, weights[:-1], 0.0)
         squares = np.minimum(np.add.accumulate(np.concatenate([lane.squares[None], used * used])), self.wanted)
         products = np.copysign(np.sqrt(np.diff(squares, axis=0)), used) * np.where(known, scores, 0.0)
@@ -75,7 +84,7 @@ class LedSums:
         paths = len(lane.total)
         fill = ndtri(dither(lane.first_path, paths, self.steps, 1, self.salt)[0] + 0.5)
         whole = lane.total + np.sqrt(np.maximum(self.wanted - lane.squares, 0.0)) * fill
-        self.sums += across(np.array([np.ones(paths), whole]))
+        self.sums += across(np.array([lane.whole.astype(float), np.where(lane.whole, whole, 0.0)]))
 
     def merge(self, other: LedSums) -> None:
         self.sums += other.sums

@@ -92,3 +92,12 @@ def _rows(stated, values):
     from procgen.checks.judgement import judged
 
     return judged(sums(stated, values))
+
+
+def test_ranks_that_are_not_given_the_first_value_are_not_held_against_what_is_left_of_it():
+    """Of a filter whose past is unknown; its 20,000 paths of 20 steps were accused with p of 1e-18."""
+    body = TRUE["regimes"]
+    for lagged, told in ((body, True), ([{"distributed_lag": {"of": body, "phi": 0.7}}], False)):
+        found = verdict(lagged, draw(spec_of(lagged, 2000, 20, 7)))
+        assert any(row.what == LED for row in found.rows) is told
+        assert any(row.what == "shocks: autocorrelation" and row.p is not None for row in found.rows)

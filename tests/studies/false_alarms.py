@@ -1,10 +1,11 @@
 """How often true ensembles are said to depart, by family of specs, shape and level.
 
-    python tests/studies/false_alarms.py [--quick] [--seeds 2000] [--only FAMILY] [--workers 2] [--out FILE [--resume]]
+    python tests/studies/false_alarms.py [--quick] [--seeds 2000] [--only FAMILY] [--workers 2] [--out FILE [--resume|--so-far]]
 
 Every run draws an ensemble exactly as stated and judges it. Printed in Markdown: the share flagged at each level with
 its 99.9 % binomial interval, by family and pooled, and how often each kind of check had a small p. With --out, each
-finished job (a family, a shape, some seeds) is a line of JSON in FILE, and --resume leaves out what is there.
+finished job (a family, a shape, some seeds) is a line of JSON in FILE; --resume leaves out what is there, and --so-far
+only reports it.
 """
 
 from __future__ import annotations
@@ -173,13 +174,20 @@ def main() -> None:
     parser.add_argument("--workers", type=int, default=1, help="processes")
     parser.add_argument("--out", type=Path, help="a file that gets a line for each finished job")
     parser.add_argument("--resume", action="store_true", help="leave out the jobs that --out already has")
+    parser.add_argument("--so-far", action="store_true", help="report what --out has, and draw nothing")
     options = parser.parse_args()
+    if options.out and options.so_far:
+        tallies: dict[str, Tally] = defaultdict(Tally)
+        for family, tally in done(options.out).values():
+            tallies[family].merge(tally)
+        print(report(tallies))
+        return
     known = done(options.out) if options.out and options.resume else {}
     if options.out and not options.resume:
         options.out.write_text("")
     work = list(jobs(50 if options.quick else options.seeds, options.only))
     fresh = answered([job for job in work if _key(*job) not in known], options.workers)
-    tallies: dict[str, Tally] = defaultdict(Tally)
+    tallies = defaultdict(Tally)
     for job in work:
         key = _key(*job)
         tally = known[key][1] if key in known else next(fresh)
