@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import csv
 import gzip
+import hashlib
 import io
 from collections.abc import Callable, Iterator
 from pathlib import Path
@@ -75,6 +76,12 @@ def read_file(path: Path, choose: Callable[[list[str]], N]) -> tuple[pd.DataFram
         raise TableError(f"{path} cannot be read: {reason}") from None
     book = "; save the sheet as CSV" if suffix in _BOOKS else ""
     raise TableError(f"expected a .csv, .tsv or .parquet file, got {path.name}{book}")
+
+
+def digest_of(path: Path) -> str:
+    """SHA-256 of the bytes of a file, as it lies there: what `sha256sum` says of it."""
+    with path.open("rb") as file:
+        return hashlib.file_digest(file, "sha256").hexdigest()
 
 
 def _parquet(path: Path, choose: Callable[[list[str]], N]) -> tuple[pd.DataFrame, N]:

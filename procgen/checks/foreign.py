@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 from procgen.checks import filled, handled, judge, ordered, sizes
 from procgen.checks.blocks import GROUP
 from procgen.checks.clock import ClockError, NoTime, Times, mismatch, refuse_numbers, steps_on_grid
-from procgen.checks.files import TableError, read_file
+from procgen.checks.files import TableError, digest_of, read_file
 from procgen.checks.gather import Gather
 from procgen.checks.lane import Progress, in_one_process
 from procgen.checks.reshaped import LONG, Panel, Wide, recognised
@@ -49,7 +49,7 @@ BLOCK = 1 << 22  # values of one series that are handed on at once
 def read_table(path: Path, spec: Any, columns: Mapping[str, str] | None) -> Table:
     """The table in a CSV or Parquet file; only the columns that are needed are read."""
     frame, wanted = read_file(path, lambda found: recognised(found, spec, columns, path.name))
-    return Table(*_long(frame, wanted), spec, str(path))
+    return Table(*_long(frame, wanted), spec, str(path), digest_of(path))
 
 
 def from_frame(frame: pd.DataFrame, spec: Any, columns: Mapping[str, str] | None) -> Table:
@@ -67,10 +67,13 @@ def _long(frame: pd.DataFrame, wanted: Names | Panel | Wide) -> tuple[pd.DataFra
 
 
 class Table:
-    """A table put in order: dense arrays, NaN where something is missing, and checks that name it."""
+    """A table put in order: dense arrays, NaN where something is missing, and checks that name it.
 
-    def __init__(self, frame: pd.DataFrame, names: Names, spec: Any, where: str):
-        self.spec, self.where = spec, where
+    `file_digest` is that of the file it was read from; None where it was in memory.
+    """
+
+    def __init__(self, frame: pd.DataFrame, names: Names, spec: Any, where: str, file_digest: str | None = None):
+        self.spec, self.where, self.file_digest = spec, where, file_digest
         self.columns = {name: name for name in spec.series}
         self.same_draws = False
         self.faults: list[Check] = []

@@ -217,3 +217,22 @@ def test_a_page_of_the_same_data_is_the_same_on_another_day(out):
     assert verdict_page(verdict) == verdict_page(verdict) and "Judged on" not in verdict_page(verdict)
     named = verdict_page(verdict, date(2027, 1, 4))
     assert named.replace("Judged on 2027-01-04:", "Judged:") == verdict_page(verdict)
+
+
+def test_a_report_on_a_foreign_file_tells_its_bytes_and_no_seed(tmp_path):
+    """The digest is what coreutils' sha256sum says; a table in memory has none, and neither has a seed."""
+    table = pg.render(pg.load(PUMP), paths=20, steps=40).to_pandas()
+    pages = []
+    for name in ("plant.csv", "plant.parquet", "plant.csv.gz"):
+        file, page = tmp_path / name, tmp_path / f"{name}.html"
+        table.to_parquet(file) if name.endswith(".parquet") else table.to_csv(file)
+        assert Result("validate", file, "--spec", PUMP, "--false-alarm", "1e-8", "--report", page).code == 0
+        pages.append(page.read_text())
+        said = subprocess.run(["sha256sum", file], capture_output=True, text=True, check=True).stdout.split()[0]
+        assert f"<dt>SHA-256 of the file</dt><dd>{said}</dd>" in pages[-1]
+        assert f"<dt>file</dt><dd>{file}</dd>" in pages[-1]
+    pages.append(verdict_page(pg.validate(table, pg.load(PUMP), false_alarm=1e-8)))
+    assert "SHA-256 of the file" not in pages[-1]
+    for text in pages:
+        assert "<dt>seed</dt>" not in text and "<dt>stream version</dt>" not in text
+        assert f"<dt>SHA-256 of the spec</dt><dd>{pg.load(PUMP).digest()}</dd>" in text

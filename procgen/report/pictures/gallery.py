@@ -64,7 +64,7 @@ def of_verdict(verdict: Verdict) -> Gallery | None:
     sample = of_origin(verdict.origin, [name for names in departing for name in names.split(" ~ ")])
     pairs = [tuple(names.split(" ~ ")) for names in departing if " ~ " in names]
     ensemble = getattr(verdict.origin, "ensemble", None)
-    record = _record_of_data(ensemble, sample.spec) if ensemble is not None else _record(sample.spec)
+    record = _record_of_table(verdict.origin) if ensemble is None else _record_of_data(ensemble, sample.spec)
     return _gallery(sample, record, [(a, b) for a, b, *_ in pairs])
 
 
@@ -102,14 +102,21 @@ def _charts(subject: Subject) -> Iterator[Chart]:
 
 def _record(spec: Any) -> list[tuple[str, str]]:
     from procgen.chance.streams import STREAM_VERSION
+
+    return [("seed", str(spec.seed)), ("stream version", str(STREAM_VERSION)), *_record_of_any(spec)]
+
+
+def _record_of_any(spec: Any) -> list[tuple[str, str]]:
     from procgen.ensemble.manifest import versions
 
-    return [
-        ("seed", str(spec.seed)),
-        ("stream version", str(STREAM_VERSION)),
-        ("SHA-256 of the spec", spec.digest()),
-        ("pictures made by", _listed(versions())),
-    ]
+    return [("SHA-256 of the spec", spec.digest()), ("pictures made by", _listed(versions()))]
+
+
+def _record_of_table(table: Any) -> list[tuple[str, str]]:
+    """Of anyone's table: its values come from no seed of ours; what was in memory has no bytes to tell it by."""
+    if table.file_digest is None:
+        return _record_of_any(table.spec)
+    return [("file", table.where), ("SHA-256 of the file", table.file_digest), *_record_of_any(table.spec)]
 
 
 def _record_of_data(ensemble: Any, spec: Any) -> list[tuple[str, str]]:
