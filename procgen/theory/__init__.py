@@ -12,8 +12,8 @@ raises `unknown`, with its reason.
   `logvariance`, `parallel`.
 - Processes that are no filter: `processes`, `running`, `stated`, `chains`, `markov`, `bends`, `lattice`, `distributed`,
   `bootstrap`.
-- Laws at one step: `laws`, `counted`, `lumps` (values with a chance of their own), `mixtures`, `joint`, `stable`,
-  `characteristic`, `averages`.
+- Laws at one step: `laws`, `gaussian`, `counted`, `lumps` (values with a chance of their own), `mixtures`, `joint`,
+  `stable`, `characteristic`, `averages`.
 - What is asked of a series: `memory`, `spectrum`, `horizon` with `filtering`, `verdict` (is it stationary), `doubles`
   (what their rounding hides).
 - Drawn parameters, averaged over their law: `varied`, `quadrature`, `mixed`, `mixedseries`, `mixedlaw`, `mixedlumps`.

@@ -7,7 +7,7 @@ from typing import Any
 
 import numpy as np
 
-from procgen.chance.laws.gaussian import Gaussian
+from procgen.theory.gaussian import Gaussian
 from procgen.theory.processes import Held, Process, Steps, alone, at_any
 from procgen.theory.unknown import Unknown
 from procgen.theory.verdict import LEAVES, MEMORY, SETTLES

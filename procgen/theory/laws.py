@@ -6,11 +6,11 @@ from typing import Any
 
 import numpy as np
 
-from procgen.chance.laws.gaussian import Gaussian
 from procgen.terms.base import LEAST_LOG
 from procgen.theory import exponentials
 from procgen.theory.covariance import covariance
 from procgen.theory.expression import Expression
+from procgen.theory.gaussian import Gaussian
 from procgen.theory.linear import At, Linear
 from procgen.theory.lumps import atoms_of, chance_of, nearest
 from procgen.theory.monomials import Term

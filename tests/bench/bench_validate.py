@@ -1,6 +1,7 @@
 """Time and memory of validation against those of rendering: 65,536 paths × 1,000 steps, two processes each.
 
-    python -m tests.bench.bench_validate [--quick] [--paths 65536] [--rounds 3] [--workers 2] [--dir build/bench]
+    python -m tests.bench.bench_validate [--quick] [--paths 65536] [--steps 1000] [--rounds 3] [--workers 2]
+        [--only CASE ...] [--dir build/bench]
 
 Every case is rendered and validated as whole processes, one after the other in each round, so that a slow minute of
 the machine meets both; the table gives medians, and the median of the ratios round by round. Memory is the peak
@@ -44,7 +45,7 @@ SUM = """\
 
 def main() -> None:
     args = arguments()
-    paths, steps = (2048, 200) if args.quick else (args.paths, 1_000)
+    paths, steps = (2048, 200) if args.quick else (args.paths, args.steps)
     args.dir.mkdir(parents=True, exist_ok=True)
     cases = specs(paths, steps, 200_000 if args.quick else 40_000_000)
     seen: dict[str, tuple[list[Run], list[Run]]] = {name: ([], []) for name in cases if name in (args.only or cases)}
@@ -64,6 +65,7 @@ def arguments() -> argparse.Namespace:
     parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
     parser.add_argument("--quick", action="store_true", help="2,048 × 200, once: does it run?")
     parser.add_argument("--paths", type=int, default=65_536)
+    parser.add_argument("--steps", type=int, default=1_000)
     parser.add_argument("--rounds", type=int, default=3)
     parser.add_argument("--workers", type=int, default=2)
     parser.add_argument("--only", nargs="*", help="cases, all when absent")

@@ -40,7 +40,9 @@ def jacobian(graph: Graph, steps: int, monkeypatch, width: int = 4096) -> dict[s
         for row in range(steps):
             column = places.setdefault((self.key, first_step + row), len(places) + 1)
             z[row, column] = 1.0
-        return z
+        if out is not None:
+            np.copyto(out, z)
+        return z if out is None else out
 
     with monkeypatch.context() as patch:
         patch.setattr(Stream, "uniforms", impulses)

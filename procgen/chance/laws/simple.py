@@ -44,9 +44,9 @@ class Normal(Law):
         return rate * rate / 2
 
     def distribution(self) -> Any:
-        from procgen.chance.laws.gaussian import Gaussian
+        from scipy.stats import norm
 
-        return Gaussian()
+        return norm()
 
 
 @dataclass(frozen=True)
