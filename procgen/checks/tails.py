@@ -14,7 +14,7 @@ _LOG2 = math.log(2.0)
 SAFE = 1.6
 _FAR = 1e4  # standard deviations
 _NEAR = 1e-6  # of a saddle point, in standard deviations of the tilted law there
-_CLEAR = 1.5  # over the standard deviation: contours nearer to the pole at 0 than that need more points, and gain nothing
+_CLEAR = 1.5  # over the standard deviation: contours nearer to the pole at 0 need more points, and gain nothing
 _INSIDE = 1 - 1e-12  # of the way to the pole: as far as any number that is compared needs
 _RANKS = -1e4  # logarithm of a tail, below which it only ranks: Chernoff's bound is enough
 
