@@ -8,7 +8,7 @@ from typing import Annotated, Any
 from procgen.console import guarded, printed, progress, run, said
 from procgen.declared import Argument, Option, command, fault
 from procgen.difference_command import HELP, difference
-from procgen.ensemble.own import leave
+from procgen.ensemble.own import leave, load_functions
 from procgen.export_command import EXAMPLES, Columns, export
 from procgen.options import (
     Expect,
@@ -195,6 +195,7 @@ def validate(
 
     Ends with exit code 0 when they agree, 1 when they depart, 2 when it cannot be judged.
     """
+    load_functions()
     import procgen as pg
     from procgen.report.pictures.write import page_place
     from procgen.report.rendered import verdict_json
@@ -280,6 +281,7 @@ def theory(
     setting: Settings = None,
 ) -> None:
     """Print what SPEC implies: equations, stationarity, moments, memory, and how far it can be forecast."""
+    load_functions()
     import procgen as pg
     from procgen.report.theory import theory_json, theory_text
 

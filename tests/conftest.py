@@ -5,8 +5,8 @@ import threading
 
 from hypothesis import HealthCheck, settings
 
-# How long a machine takes says nothing of what is tested.
-settings.register_profile("suite", deadline=None, suppress_health_check=[HealthCheck.too_slow])
+# How long a busy machine takes to draw examples says nothing of what is tested.
+settings.register_profile("suite", suppress_health_check=[HealthCheck.too_slow])
 settings.load_profile("suite")
 
 

@@ -10,14 +10,12 @@ import numpy as np
 
 from procgen.checks.probes import probe_steps
 from procgen.terms.graph import Source
+from procgen.terms.supports import support_of
 
 # Kinds that can hold a value where it is, or switch off what moves it.
 _HOLDING = frozenset({"clip", "hinge", "min", "max", "flag", "chain", "regimes", "switching_noise"})
 _RESTING = frozenset({"intermittent", "zero_inflated", "compound_poisson"})  # kinds whose draws show now and then
-
-
-_OF_FEW = frozenset({"poisson", "negative_binomial", "inar", "flag", "chain", "round", "floor", "ceiling"})
-_OF_FEW |= _RESTING | {"moving_blocks"}
+_OF_FEW = _RESTING | {"chain", "moving_blocks"}  # beside those on a lattice, and those with values of their own
 _CHOOSING = frozenset({"regimes", "schedule", "product"})  # kinds of which one part alone may be all that is seen
 _FAR = 7.0  # standard deviations that a body without a law may be off its mean
 
@@ -93,9 +91,9 @@ def _made_of_few(graph: Any, node: Any) -> bool:
         return node.law.points is not None
     if not any(isinstance(part, Source) for part in graph.order([node])):
         return True
-    parts = [_made_of_few(graph, part) for part in node.inputs]
-    if node.term.kind in _OF_FEW:
+    if node.term.kind in _OF_FEW or node.term.piles or support_of(node).step:
         return True
+    parts = [_made_of_few(graph, part) for part in node.inputs]
     return any(parts) if node.term.kind in _CHOOSING else all(parts)
 
 

@@ -81,6 +81,23 @@ def add_products(total, a, b, both, offset, block):
         first = end
 
 
+def combined(x, y, one, other, means, first, end, total, block):
+    """Add one · x + other · y − mean, summed over the steps first … end − 1 of each path, to total; a mean a step."""
+    paths = x.shape[1]
+    start = first
+    while start < end:
+        stop = min(start - start % BLOCK + BLOCK, end)
+        for p in range(paths):
+            block[p] = 0.0
+        for t in range(start, stop):
+            a, b, mean = x[t], y[t], means[t - first]
+            for p in range(paths):
+                block[p] += (one * a[p] + other * b[p]) - mean
+        for p in range(paths):
+            total[p] += block[p]
+        start = stop
+
+
 @_part
 def _add(total, rows, block):
     paths = total.shape[0]

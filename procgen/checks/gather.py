@@ -51,9 +51,14 @@ class Plan:
         self.names = [plan.name for plan in self.series]
         sizes = [len(plan.steps) for plan in self.series]
         self.offset = np.concatenate([[0], np.cumsum(sizes)]).astype(int)
+        summed = [column for column, plan in enumerate(self.series) if not plan.gaussian or plan.coarse.any()]
+        self.deviations = [int(self.offset[column]) + i for column in summed for i in range(sizes[column])]
         self.products = [
-            (column, i, j) for column, plan in enumerate(self.series) for i, j in [*_diagonal(plan), *plan.pairs]
+            (column, i, j)
+            for column in summed
+            for i, j in [*_diagonal(self.series[column]), *self.series[column].pairs]
         ]
+        self.crossed = [(pair, k) for pair in self.cross if not pair.gaussian for k in range(len(pair.places))]
         self.moment_pairs = [
             (int(at) + i, int(at) + j)
             for at, size in zip(self.offset, sizes, strict=False)
@@ -131,9 +136,9 @@ class Gather:
         plan = self.plan
         self.structure = Structure(plan.precision, plan.steps)
         self.moments = Moments(int(plan.offset[-1]), plan.moment_pairs)
-        self.deviations = Powers(int(plan.offset[-1]))
+        self.deviations = Powers(len(plan.deviations))  # of what is not judged by the moments alone, as those below
         self.products = Powers(len(plan.products))
-        self.crossed = Powers(sum(len(pair.places) for pair in plan.cross))
+        self.crossed = Powers(len(plan.crossed))
         self.pooled = [Powers(p.pool.size) if p.pool else None for p in plan.series]
         self.related = [Powers(relation.pool.size) for relation in plan.relations]
         self.starts, self.scatter = Powers(len(plan.starts)), Powers(len(plan.scattered))
@@ -166,7 +171,7 @@ class Gather:
         self.structure.close(first_path, prints)
         rows = probes - _means(plan)
         self.moments.absorb(np.where(plan.gappy, 0.0, rows))  # gaps of one series must not cost the others their paths
-        self.deviations.absorb(rows)
+        self.deviations.absorb(rows[:, plan.deviations])
         self.products.absorb(_products(plan, rows))
         self.starts.absorb(_starts(plan, rows))
         self.scatter.absorb(scatter)
@@ -294,15 +299,14 @@ def _waves(plan: Plan, rows: NDArray) -> NDArray:
 
 def _cross_products(plan: Plan, rows: NDArray) -> NDArray:
     """Products of two series beside the stated slope of the first on the second."""
-    columns = []
-    for pair in plan.cross:
+    out = np.full((len(rows), len(plan.crossed)), np.nan)
+    for column, (pair, k) in enumerate(plan.crossed):
+        (i, j), known = pair.places[k], pair.covariance[k]
         first, second = plan.series[pair.first], plan.series[pair.second]
-        variance = second.variance
-        for (i, j), known in zip(pair.places, pair.covariance, strict=True):
+        if known is not None and second.variance[j] > 0 and not (first.coarse[i] or second.coarse[j]):
             a, b = rows[:, plan.offset[pair.first] + i], rows[:, plan.offset[pair.second] + j]
-            usable = known is not None and variance[j] > 0 and not (first.coarse[i] or second.coarse[j])
-            columns.append(b * (a - known / variance[j] * b) if usable else np.full(len(rows), np.nan))
-    return np.array(columns).T if columns else np.zeros((len(rows), 0))
+            out[:, column] = b * (a - known / second.variance[j] * b)
+    return out
 
 
 def _diagonal(plan: SeriesPlan) -> list[tuple[int, int]]:

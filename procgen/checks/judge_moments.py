@@ -94,7 +94,7 @@ def _mean_and_variance(gather: Gather, column: int, i: int) -> Iterator[Check]:
             variance = judge.variance(moments.covariance(k, k), sigma2, n - 1)
             yield Check.of(plan.name, "variance", _at(plan, i), "spread", variance)
         return
-    sample = sample_of(gather.deviations, k)
+    sample = sample_of(gather.deviations, gather.plan.deviations.index(k))
     yield limit(plan, "mean", _at(plan, i), "level", sample, mu, 1, math.sqrt(sigma2), plan.skewness(1))
     product = gather.plan.products.index((column, i, i))
     sd = None if plan.coarse[i] else plan.product_sd.get((i, i))
@@ -195,7 +195,7 @@ def cross_moments(gather: Gather, place: int) -> Iterator[Check]:
     """Covariances of two series at common probes."""
     pair = gather.plan.cross[place]
     a, b = (gather.plan.series[k] for k in (pair.first, pair.second))
-    start = sum(len(p.places) for p in gather.plan.cross[:place])
+    start = sum(len(p.places) for p in gather.plan.cross[:place] if not p.gaussian)
     name = f"{a.name} ~ {b.name}"
     stated = [value for value in pair.covariance if value is not None]
     if len(stated) < len(pair.covariance):

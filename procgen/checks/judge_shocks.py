@@ -91,7 +91,7 @@ def _lag_finding(chains: Counter[int], lag: int, pairs: int, total: float) -> Fi
     if pairs >= _EXACT_BELOW:
         return judge.unit(total / math.sqrt(pairs), 1 / math.sqrt(pairs))
     without_gaps = pairs == sum(paths * max(length - lag, 0) for length, paths in chains.items())
-    weights, dof = _chain_weights(chains, lag) if without_gaps else _one_chain_weights(sum(chains.values()), pairs)
+    weights, dof = _chain_weights(chains, lag) if without_gaps else _longest_chain_weights(max(chains), pairs)
     upper, lower = tails.weighted_chi_squares(total, weights, dof)
     plain = judge.unit(total / math.sqrt(pairs), 1 / math.sqrt(pairs))
     return Finding(0.0, total / pairs, plain.standard_error, tails.two_sided(upper, lower), plain.detect)
@@ -108,12 +108,13 @@ def _chain_weights(chains: Counter[int], lag: int) -> tuple[NDArray, NDArray]:
     return np.concatenate(weights), np.concatenate(dof)
 
 
-def _one_chain_weights(paths: int, pairs: int) -> tuple[NDArray, NDArray]:
-    """The same where shocks are missing here and there: as if all pairs of a path were links of one chain.
+def _longest_chain_weights(most: int, pairs: int) -> tuple[NDArray, NDArray]:
+    """The same where shocks are missing here and there, and a path has `most` of them: as if all pairs were in a row.
 
-    Their number gives the variance; how they hang together is not kept, and no other way has tails as long.
+    Their number gives the variance. How they hang together is not kept: a shock has two partners at most, so that they
+    are links of chains, and none is longer than a path's shocks in a row, whose sums have the longest tails.
     """
-    links = math.ceil(pairs / paths)
+    links = min(most - 1, pairs)
     return _eigenvalues(links + 1), np.full(links + 1, pairs / links)
 
 

@@ -23,7 +23,7 @@ from procgen.checks.special import lumpy
 from procgen.checks.squares import plan_squares
 from procgen.checks.structure import Precision
 from procgen.checks.support import possible_of, vanishes
-from procgen.terms.supports import support_of
+from procgen.terms.supports import column_type, support_of
 from procgen.theory.lumps import atoms_of
 
 _OFF = 1e-9  # of its size, that a value may be off a grid and lie on it
@@ -112,8 +112,6 @@ def _unseen(way: Route | Cannot) -> bool:
 
 def _precision(declared: Any, graph: Any, plan: SeriesPlan, flat: bool, steps: int, count: int) -> Precision:
     """How the `count` values of a series are stored, and which values it cannot have."""
-    from procgen.terms.supports import column_type
-
     name, theory = plan.name, plan.theory
     kind, few = column_type(graph, name), lumpy(theory)
     if not theory.random:

@@ -8,6 +8,7 @@ stationary; of what is, how far the averages of paths lie apart, and the shares 
 
 from __future__ import annotations
 
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from functools import cached_property
 from typing import Any
@@ -16,7 +17,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.checks import rounding
-from procgen.checks.blocks import Window, across, add_products, scratch
+from procgen.checks.blocks import Window, across, add_products, compiled, in_one_pass, scratch
 from procgen.checks.slow import Slow, SlowLane, plan_slow
 from procgen.theory.lumps import atoms_of
 from procgen.theory.verdict import STRICT
@@ -171,8 +172,9 @@ def _joint(plan: Any, window: NDArray) -> NDArray | None:
 def _eigenvalues(gamma: NDArray, lags: tuple[int, ...]) -> NDArray:
     """Eigenvalues of each average as a quadratic form in independent normals."""
     width = len(gamma)
-    values, vectors = np.linalg.eigh(gamma)
-    root = vectors * np.sqrt(np.maximum(values, 0.0))
+    parts = _parts(gamma)
+    values, vectors = np.linalg.eigh(parts)
+    roots = vectors * np.sqrt(np.maximum(values, 0.0))[:, None, :]
     rows = [np.zeros(width)]
     rows[0][0] = float(gamma.sum()) / width**2  # the variance of the mean over steps
     for lag in lags:
@@ -180,8 +182,24 @@ def _eigenvalues(gamma: NDArray, lags: tuple[int, ...]) -> NDArray:
         at = np.arange(lag, width)
         form[at, at - lag] += 0.5
         form[at - lag, at] += 0.5
-        rows.append(np.linalg.eigvalsh(root.T @ (form / (width - lag)) @ root))
+        form /= width - lag
+        forms = _parts(form) if len(parts) > 1 else form[None]
+        own = np.linalg.eigvalsh(roots.transpose(0, 2, 1) @ forms @ roots) if lag else values / width
+        rows.append(own.ravel())
     return np.array(rows)
+
+
+def _parts(a: NDArray) -> NDArray:
+    """Two matrices that have the eigenvalues of one between them, where it is the same when both its axes are turned.
+
+    That of a steady series is (Cantoni & Butler 1976, Eigenvalues and eigenvectors of symmetric centrosymmetric
+    matrices); of others there is one part, the matrix. Half of the size costs an eighth.
+    """
+    middle = len(a) // 2
+    if len(a) % 2 or not np.allclose(a, a[::-1, ::-1], rtol=0.0, atol=1e-14 * np.abs(a).max()):
+        return a[None]
+    turned = a[:middle, : middle - 1 : -1]
+    return np.array([a[:middle, :middle] + turned, a[:middle, :middle] - turned])
 
 
 def _changes(plan: Any, steps: int, length: int) -> Changes | None:
@@ -249,24 +267,45 @@ class PoolLane:
 
     def absorb(self, x: NDArray, step: int) -> None:
         """Add a tile (steps, paths)."""
-        self._window(x, step)
+        self.window_of(x, step)
         if self.slow is not None:
             self.slow.absorb(x, step)
         for each, kept in zip(self.pool.changes, self.changes, strict=True):
             for i in np.flatnonzero((each.steps >= step) & (each.steps < step + len(x))):
                 kept[i] = x[each.steps[i] - step]
+        for total, start, end, mean in self._halves(step, len(x)):
+            rows = np.subtract(x[start:end], mean[:, None], out=scratch(end - start, x.shape[1], 1))
+            self.unknown |= ~np.isfinite(rows).all(axis=0)
+            add_products(total, rows, None, start)
+
+    def absorb_sum(self, x: NDArray, y: NDArray, weights: Sequence[float], step: int) -> bool:
+        """Add the averages of a tile of weights[0] · x + weights[1] · y; whether that is all but for the window.
+
+        The sums of each half are made without a tile of its own for the combination, with the same bits.
+        """
+        if self.changes or self.slow is not None or not compiled(x.shape[1]):
+            return False
+        halves = self.halves.copy()
+        room = np.empty(x.shape[1])
+        for total, start, end, mean in self._halves(step, len(x)):
+            in_one_pass("combined", x, y, *weights, np.ascontiguousarray(mean), start, end, total, room)
+        if not np.isfinite(self.halves).all():
+            self.halves = halves  # what is not finite is left out by the plain form
+            return False
+        return True
+
+    def _halves(self, step: int, count: int) -> Iterator[tuple[NDArray, int, int, NDArray]]:
+        """Of each half of the level's window that a tile of so many steps reaches: total, first step, end, means."""
         level = self.pool.level
         if level is not None:
             middle = (level.first + level.last) // 2
             for total, a, b in zip(self.halves, (level.first, middle), (middle, level.last), strict=True):
-                start, end = max(a - step, 0), min(b - step, len(x))
+                start, end = max(a - step, 0), min(b - step, count)
                 if start < end:
-                    mean = level.mean[step + start - level.first : step + end - level.first, None]
-                    rows = np.subtract(x[start:end], mean, out=scratch(end - start, x.shape[1], 1))
-                    self.unknown |= ~np.isfinite(rows).all(axis=0)
-                    add_products(total, rows, None, start)
+                    yield total, start, end, level.mean[step + start - level.first : step + end - level.first]
 
-    def _window(self, x: NDArray, step: int) -> None:
+    def window_of(self, x: NDArray, step: int) -> None:
+        """Add what is averaged over the window; a tile that begins at a multiple of 64 steps."""
         pool = self.pool
         start, end = max(pool.first - step, 0), min(pool.last - step, len(x))
         if start >= end:

@@ -16,7 +16,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from procgen.checks.blocks import scratch
+from procgen.checks.blocks import BLOCK, scratch
 from procgen.checks.pools import Pool, PoolLane
 from procgen.checks.probes import SeriesPlan, plan_series
 from procgen.checks.sums import Powers
@@ -177,4 +177,14 @@ class RelationLane:
         self.relation, self.pool = relation, PoolLane(relation.pool, paths)
 
     def absorb(self, tiles: Mapping[str, NDArray], step: int) -> None:
-        self.pool.absorb(self.relation.values(tiles), step)
+        """Add tiles (steps, paths) of all series, which begin at a multiple of 64 steps."""
+        relation, pool = self.relation, self.pool
+        names, steps = list(relation.weights), len(next(iter(tiles.values())))
+        x, y = (np.ascontiguousarray(tiles[name]) for name in (names[0], names[-1]))
+        weights = [float(w) for w in relation.weights.values()]
+        if len(names) == 2 and pool.absorb_sum(x, y, weights, step):
+            begin = max(pool.pool.first - step, 0) // BLOCK * BLOCK  # the combination itself is wanted at the end only
+            if begin < steps:
+                pool.window_of(relation.values({name: tiles[name][begin:] for name in relation.weights}), step + begin)
+            return
+        pool.absorb(relation.values(tiles), step)

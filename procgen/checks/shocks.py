@@ -153,6 +153,7 @@ class ShockSums:
         lane.view, lane.sizes = (window.newest(n + len(z) - cut) for window, n in zip(windows, seen, strict=True))
 
     def _absorb(self, z: NDArray, first_step: int, lane: ShockLane, x: NDArray | None, whole: bool) -> None:
+        """The same of what is taken in one go; `whole`: whether all shocks are known."""
         lane._earlier, offset = None, 0
         known = z if whole else np.isfinite(z)
         if not whole and not lane.scores.held:  # nothing is carried so far: it begins with the first shock

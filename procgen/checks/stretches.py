@@ -96,8 +96,10 @@ class StretchSums:
     def finish(self, lane: StretchLane) -> None:
         """Close a range of paths."""
         if lane.rows is not None and len(lane.rows):
-            rows = np.pad(lane.rows, ((0, BLOCK - len(lane.rows)), (0, 0)), constant_values=np.nan)
-            self._add_blocks(_halved(rows, 4), lane)
+            short = np.full((_GROWTH, lane.totals.shape[1]), np.nan)  # no block is whole, but some of these are
+            whole = len(lane.rows) // LENGTHS[0]
+            short[:whole] = _halved(lane.rows[: whole * LENGTHS[0]], 4)
+            self._add_squares(0, short, lane)
         self.sums[0] += lane.counts
         self.sums[1] += across(lane.totals)
 

@@ -29,7 +29,7 @@ _part = partial(compiled_function, inline="always")
 
 def strips(
     g, clusters, steps, kept, table, scale, counts, worst, totals, at, beside, profile, tops, squares, blocks, room
-):  # fmt: skip
+):
     """Sum over the last `steps` of two windows' views, g of scores and clusters, whose new rows are filled in here.
 
     kept: how many of the last rows of each block of clusters are filled in. table, scale: of `uniforms.pieces`.

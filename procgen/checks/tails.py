@@ -14,6 +14,7 @@ _LOG2 = math.log(2.0)
 SAFE = 1.6
 _FAR = 1e4  # standard deviations
 _NEAR = 1e-6  # of a saddle point, in standard deviations of the tilted law there
+_CLEAR = 1.5  # over the standard deviation: contours nearer to the pole at 0 need more points, and gain nothing
 _INSIDE = 1 - 1e-12  # of the way to the pole: as far as any number that is compared needs
 _RANKS = -1e4  # logarithm of a tail, below which it only ranks: Chernoff's bound is enough
 
@@ -139,7 +140,7 @@ def _upper(x: float, w: NDArray, d: NDArray) -> float:
         return -math.inf
     s_max = 0.5 / top if top > 0 else math.inf
     sd = math.sqrt(float(np.sum(2 * d * w * w)))
-    s0 = max(_saddle(x, w, d, s_max, sd), 0.3 / sd)
+    s0 = max(_saddle(x, w, d, s_max, sd), min(_CLEAR / sd, 0.5 * s_max), 0.3 / sd)
     if s0 > 0.95 * s_max:
         s0 = max(0.95 * s_max, _saddle(x, w, d, s_max, sd))
     return _contour(x, w, d, s0, s_max)
@@ -180,7 +181,7 @@ def _contour(x: float, w: NDArray, d: NDArray, s0: float, s_max: float) -> float
     base = -0.5 * float(np.sum(d * np.log1p(-2 * w * s0))) - s0 * x
     if base < _RANKS:
         return base
-    total, start, chunk = 0.0, 0, 32
+    total, start, chunk = 0.0, 0, 40
     while start < 400_000:
         v = step * np.arange(start, start + chunk)
         s = s0 + 1j * v + bend * v * v

@@ -9,13 +9,14 @@ import numpy as np
 from scipy.special import log_ndtr, ndtr, ndtri
 
 _LOG_ROOT_2_PI = 0.9189385332046727
+_OTHERS = frozenset({"entropy", "expect", "interval", "median", "moment", "rvs", "stats", "support"})
 
 
 @dataclass(frozen=True)
 class Gaussian:
     """The normal law of a mean and a standard deviation above 0.
 
-    All that a law of `scipy.stats` answers, of the same bits: what is not written here is asked of that.
+    All that a law of `scipy.stats` answers, with the same numbers: what is not written here is asked of that.
     """
 
     location: float = 0.0
@@ -60,8 +61,8 @@ class Gaussian:
         return self.scale
 
     def __getattr__(self, name: str) -> Any:
-        if name.startswith("_"):
-            raise AttributeError(name)  # as copying and pickling ask
+        if name not in _OTHERS:
+            raise AttributeError(name)
         from scipy.stats import norm
 
         return getattr(norm(self.location, self.scale), name)

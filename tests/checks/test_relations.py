@@ -2,13 +2,18 @@
 
 from __future__ import annotations
 
+from types import SimpleNamespace
+
 import numpy as np
 import pytest
 from scipy.linalg import solve_discrete_lyapunov
 
 import procgen as pg
+from procgen.chance import kernel
 from procgen.chance.laws import LAWS
 from procgen.checks.planning import plan_of
+from procgen.checks.pools import plan_pool
+from procgen.checks.relations import Relation, RelationLane
 from procgen.spec.reader import read_text
 from procgen.terms import catalogue
 
@@ -111,3 +116,25 @@ def test_which_of_two_steady_series_leads():
 def test_series_whose_shocks_are_compared_are_not_added_up():
     assert plan_of(spec_of(LEADS.replace(", law: laplace", ""))).relations == []
     assert plan_of(spec_of(LEADS.replace("{use: f}], by", "{white_noise: {sd: 1}, as: own}], by"))).relations == []
+
+
+@pytest.mark.skipif(not kernel.available(), reason="numba is not installed")
+@pytest.mark.parametrize("cuts", [(), (64, 192), (256, 320, 576)])
+@pytest.mark.parametrize("unknown", [False, True])
+def test_compiled_sums_of_two_series_have_the_bits_of_plain_ones(cuts, unknown):
+    pool = plan_pool(plan_of(spec_of("series:\n  a: [{ar: {phi: 0.5, sd: 1}}]\n")).series[0], 600, blind=True)
+    relation = Relation({"a": 0.3, "b": 1.7}, SimpleNamespace(pool=pool))
+    x, y = np.random.default_rng(5).standard_normal((2, 600, 40))
+    if unknown:
+        x[70, 3], y[599, 7] = np.nan, np.inf
+
+    def averages():
+        lane = RelationLane(relation, 40)
+        for begin, end in zip([0, *cuts], [*cuts, 600], strict=True):
+            lane.absorb({"a": x[begin:end], "b": y[begin:end]}, begin)
+        return lane.pool.averages()
+
+    plain = averages()
+    with kernel.compiling():
+        np.testing.assert_array_equal(averages(), plain)
+    assert np.isnan(plain).any() == unknown

@@ -72,3 +72,21 @@ def test_what_cannot_be_written_is_told_by_python():
     buffered = {name: value for name, value in os.environ.items() if name != "PYTHONUNBUFFERED"}
     done = subprocess.run([sys.executable, "-c", script], cwd=ROOT, capture_output=True, text=True, env=buffered)
     assert done.returncode == 120 and "Bad file descriptor" in done.stderr
+
+
+FUNCTIONS = """
+from procgen.ensemble import own
+{claim}
+own.load_functions()
+import numpy, scipy.special
+print("numpy.f2py" in sys.modules)
+import numpy.f2py
+print(numpy.testing.assert_equal.__name__, numpy.f2py.__name__, scipy.special.ndtr(0.0))
+"""
+
+
+@pytest.mark.parametrize("claim", ["own.claim()", ""])
+def test_scipys_functions_come_without_what_they_never_use_and_all_of_numpy_is_there(claim):
+    loaded, names, _ = said(FUNCTIONS.format(claim=claim))
+    assert names == "assert_equal numpy.f2py 0.5"
+    assert claim == "" or loaded == "False"
