@@ -52,7 +52,9 @@ class Drawer:
     def _rows(self, block: Block, out: Mapping[str, np.ndarray]) -> None:
         run, step = self._run(block), block.first_step
         compiling = kernel.is_compiling()
-        for steps in tiles(block.steps, block.paths, len(self.source.columns), CACHED if compiling else TILE):
+        count = len(self.source.columns)
+        most = max(CACHED, TILE // count if block.paths == 1 else 0) if compiling else TILE
+        for steps in tiles(block.steps, block.paths, count, most):
             with np.errstate(all="ignore"):  # what is not finite is refused below, with its place
                 tile = run.tile(steps)
             start = step - block.first_step

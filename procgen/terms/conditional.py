@@ -60,6 +60,14 @@ class Conditional(Term):
         """The number below 1 whose powers `burn` follows, or a row of them; None where it is not one number."""
         return None
 
+    def fades(self):
+        """Whether differences of variances become smaller on average."""
+        raise NotImplementedError
+
+    def early(self):
+        """Steps after which a state does not tell any more, to the last bit, where it began: `burn` is to 1e-12."""
+        return int(self.burns.max()) * 4 // 3 if self.fades() else math.inf
+
     def rest(self):
         raise NotImplementedError
 
@@ -110,6 +118,11 @@ class Conditional(Term):
             return None, state
         whole = {name: np.concatenate([part[name] for part in kept]) for name in kept[0]}
         return {name: part[len(part) - before.head :] for name, part in whole.items()}, state
+
+
+def row_of(state, like):
+    """The last values of a state of one row, one a path of a tile."""
+    return np.broadcast_to(state[0], like.shape[1:]).copy()
 
 
 def burn_without_variance(law, factor):
