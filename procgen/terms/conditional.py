@@ -17,6 +17,7 @@ from procgen.terms.start import decay_lengths
 # What is left of an unknown first variance where recovered shocks begin, as a share. Shocks of few values are told
 # apart to 1e-6 of their size, and a first variance may be hundreds of times the next: 1e-7 would be too much.
 FORGOTTEN = 1e-9
+BURN_LEAST = 4_096  # values of a tile of a burn-in, for few paths
 OMEGA = Parameter("omega", "ω", Real(above=0), "the constant in the variance", default=None, unit="series²")
 SD = Parameter(
     "sd", "σ", Real(above=0), "unconditional standard deviation, instead of `omega`", default=None, unit="series"
@@ -110,9 +111,10 @@ class Conditional(Term):
         """Values at steps −head … −1 and the state at step 0, from `state` on, tile by tile."""
         (count,) = self.reach(before.head)
         z, kept = before.inputs[0], []
-        for first in range(len(z) - count, len(z), BURN_TILE):
-            values, state = self.recurse((z[first : min(first + BURN_TILE, len(z))],), state, None)
-            if first + BURN_TILE > len(z) - before.head:
+        size = max(BURN_TILE, BURN_LEAST // max(z[:0].shape[1], 1))
+        for first in range(len(z) - count, len(z), size):
+            values, state = self.recurse((z[first : min(first + size, len(z))],), state, None)
+            if first + size > len(z) - before.head:
                 kept.append(values)
         if not before.head:
             return None, state
