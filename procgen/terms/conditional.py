@@ -12,7 +12,7 @@ from procgen.spec.declare import Flag, Parameter, Real, Reals, Record
 from procgen.terms.base import Draw, Term, rows, stated
 from procgen.terms.burnt import BURN_TILE, burnt
 from procgen.terms.rows import each_path, row_in
-from procgen.terms.start import decay_lengths
+from procgen.terms.start import decay_lengths, lasting
 
 # What is left of an unknown first variance where recovered shocks begin, as a share. Shocks of few values are told
 # apart to 1e-6 of their size, and a first variance may be hundreds of times the next: 1e-7 would be too much.
@@ -66,8 +66,7 @@ class Conditional(Term):
         raise NotImplementedError
 
     def early(self):
-        """Steps after which a state does not tell any more, to the last bit, where it began: `burn` is to 1e-12."""
-        return int(self.burns.max()) * 4 // 3 if self.fades() else math.inf
+        return lasting(lambda: self.burns.max()) if self.fades() else math.inf
 
     def rest(self):
         raise NotImplementedError

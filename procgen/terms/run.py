@@ -5,6 +5,7 @@ A `Run` is a pure function of the graph and the range: how its steps are cut int
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable, Mapping, Sequence
 from functools import cached_property, partial
 from itertools import pairwise
@@ -66,6 +67,15 @@ class Run:
         if not self._states:
             self._begin()
         return self._states[node.key]
+
+    def early(self) -> float:
+        """Steps after which the state is likely to be, to the last bit, that of any other past; inf where never."""
+        if not self._states:
+            self._begin()
+        if self.graph.pace > 1:
+            return math.inf
+        terms = [node.term for node in self._order if isinstance(node, Node)]
+        return sum([0 if isinstance(term, Hidden) else term.early() for term in terms])
 
     def restore(self, step: int, state: dict[str, Array]) -> None:
         """Go on from a state that `state()` gave after step `step` − 1 of the same paths."""
