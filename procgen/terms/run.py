@@ -150,6 +150,10 @@ class Run:
 
     def _alone(self, source: Source, first_step: int, steps: int) -> Array:
         """Shocks of a source that is mixed with no other; many are shared among threads by their steps."""
+        count = at_hand()
+        if count == 1 or steps * self.paths < SHARED:
+            u = source.stream.uniforms(self.first_path, self.paths, first_step, steps)
+            return source.law.shocks(u, out=u)
         out = np.empty((steps, self.paths))
 
         def fill(span: tuple[int, int]) -> None:
@@ -157,7 +161,6 @@ class Run:
             source.stream.uniforms(self.first_path, self.paths, first_step + span[0], len(rows), out=rows)
             source.law.shocks(rows, out=rows)
 
-        count = at_hand() if out.size >= SHARED else 1
         each(fill, [*pairwise([steps * k // count for k in range(count + 1)])])
         return out
 
