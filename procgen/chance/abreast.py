@@ -80,6 +80,60 @@ def abreast(definition: ast.FunctionDef, kinds: Mapping[str, Any], returns: int)
     return f"def run(lanes, {', '.join((*kinds, *kept, *rows))}):\n    {body}\n"
 
 
+def beside(definition: ast.FunctionDef, kinds: Mapping[str, Any], returns: int) -> str | None:
+    """A module with `run(lanes, stride, steps, keep, *arguments, *kept, *rows, *at_hand)`: pieces of one path abreast.
+
+    Each lane takes so many steps, `stride` after those of the lane before; they are brought beside each other a few at
+    a time, `at_hand` having room for them, a tile for each of those of the arguments. Rows move on in the place of the
+    arguments. What is found is kept or not. None where the kernel is not one loop over steps of which each reads and
+    writes its own step alone, and returns what it carries in the order of its arguments.
+    """
+    text = abreast(definition, kinds, returns)
+    carried = [name for name in kinds if name in moved(definition)]
+    tiles = [name for name, kind in kinds.items() if kind == "tile"]
+    value = definition.body[-1].value if isinstance(definition.body[-1], ast.Return) else None
+    given = value.elts if isinstance(value, ast.Tuple) else [value]
+    if text is None or [ast.unparse(name) for name in given if name is not None] != carried:
+        return None
+    found = [name for name in tiles if name in _stored(definition)]
+    if any(kinds[name] != "row" for name in carried) or not found or not _by_their_step(definition, tiles):
+        return None
+    names = (*kinds, *(f"{name}_kept" for name in carried), *(f"row{i}" for i in range(returns)))
+    passed = ", ".join(f"{name}_now" if name in tiles else name for name in names)
+
+    def each_value(line: str, names: list[str], indent: str) -> str:
+        loops = f"{indent}for i in range(count):\n{indent}    for lane in range(lanes):\n"
+        return loops + "".join(f"{indent}        {line.format(name)}\n" for name in names)
+
+    here, there = "{0}_now[i, lane]", "{0}[lane * stride + begin + i, 0]"
+    return (
+        f"{text.replace('def run(', 'def abreast(', 1)}\nabreast = compiled(abreast)\n\n"
+        f"def run(lanes, stride, steps, keep, {', '.join(names)}, {', '.join(f'{name}_at' for name in tiles)}):\n"
+        f"    size = {tiles[0]}_at.shape[0]\n"
+        f"    for begin in range(0, steps, size):\n"
+        f"        count = min(size, steps - begin)\n"
+        + "".join(f"        {name}_now = {name}_at[:count]\n" for name in tiles)
+        + each_value(f"{here} = {there}", [name for name in tiles if name not in found], "        ")
+        + f"        abreast(lanes, {passed})\n        if keep > 0:\n"
+        + each_value(f"{there} = {here}", found, "            ")
+        + "        for lane in range(lanes):\n"
+        + "".join(f"            {name}[lane] = row{i}[lane]\n" for i, name in enumerate(carried))
+    )
+
+
+def _by_their_step(definition: ast.FunctionDef, tiles: list[str]) -> bool:
+    """Whether tiles are read and written at the step of the loop only."""
+    nodes = [node for node in ast.walk(definition) if isinstance(node, ast.Subscript)]
+    at = {ast.unparse(node.slice) for node in nodes if ast.unparse(node.value) in tiles}
+    return at == {ast.unparse(node.target) for node in definition.body if isinstance(node, ast.For)}
+
+
+def _stored(definition: ast.FunctionDef) -> frozenset[str]:
+    """Names of the arrays that are written to."""
+    nodes = [node for node in ast.walk(definition) if isinstance(node, ast.Subscript)]
+    return frozenset(ast.unparse(node.value) for node in nodes if isinstance(node.ctx, ast.Store))
+
+
 _ROWS = ("row", "one", "number")
 
 

@@ -108,12 +108,18 @@ def turned(values, out, first, odd):
     """
     steps, paths = values.shape
     infinite, unknown = 0, 0
-    for i in range(steps):
+    if paths == 1:  # a loop over one path in a loop over steps is not done eight at a time
+        for step in range(steps):
+            x = values[step, 0]
+            out[0, first + step] = x
+            infinite += abs(x) == np.inf
+            unknown += x != x
+    for i in range(steps if paths > 1 else 0):
         for j in range(paths):
             infinite += abs(values[i, j]) == np.inf
             unknown += values[i, j] != values[i, j]
     odd[0], odd[1] = infinite, unknown
-    for path in range(0, paths, _SQUARE):
+    for path in range(0, paths if paths > 1 else 0, _SQUARE):
         for step in range(0, steps, _SQUARE):
             if path + _SQUARE <= paths and step + _SQUARE <= steps:
                 for i in range(path, path + _SQUARE):
@@ -209,7 +215,11 @@ def uniforms_abreast(k0, k1, step, path, out, work):
         if wide and whole <= block < cut:
             continue
         within, group, at = np.uint64(block & 3), np.uint64(block >> 2), 4 * block - path
-        for begin in range(0, steps, at_hand):
+        alone = at >= 0 and paths - at == 1  # the first word of four: what the others need is not done
+        for i in range(steps if alone else 0):
+            section, place = _position(step + i)
+            out[i, at] = _uniform(_block_of_halves(k0, k1, np.uint64(4) * place + within, group, section)[0])
+        for begin in range(0, 0 if alone else steps, at_hand):
             size = min(at_hand, steps - begin)
             for i in range(size):
                 section, place = _position(step + begin + i)

@@ -32,11 +32,12 @@ from typing import Any, Literal
 
 import numpy as np
 
-from procgen.chance.abreast import abreast, by_step, kind_of, moved, passed
+from procgen.chance.abreast import abreast, beside, by_step, kind_of, moved, passed
 from procgen.chance.machine import Machine, multiplies_eight, write
 
-_NARROW = 15  # paths: with more, the compiled form takes all of them at each step (measured: 1-4 ns against 3-14)
+_NARROW = 4  # paths: with more, the compiled form takes all of them at each step (measured: 1-3 ns against 1-14)
 _FEW = 256  # paths: with more, NumPy's rows are quicker than one path after another
+_AT_HAND = 64  # steps of pieces that are brought beside each other at a time
 _compiling: ContextVar[bool] = ContextVar("compiling", default=False)
 
 
@@ -96,6 +97,34 @@ class Kernel:
         kept = [np.empty(lanes) for name in names if name in self._text.moved]
         run(lanes, *map(passed, args, kinds), *kept, *rows)
         return _as_returned(rows)
+
+    @property
+    def carries(self) -> list[bool]:
+        """Of each argument, whether it moves on with the steps."""
+        return [name in self._text.moved for name in self._text.names]
+
+    def beside(self, stride: int, steps: int, keep: bool, *args: Any) -> bool:
+        """Run pieces of one path abreast by the compiled form: see `abreast.beside`; False where there is none.
+
+        Arguments that move on are rows, one value a piece, and are moved; tiles have the one path's steps.
+        """
+        lanes = next(len(a) for a, carried in zip(args, self.carries, strict=True) if carried)
+        names, subscripted = self._text.names, self._text.subscripted
+        kinds = tuple(
+            "tile" if np.ndim(a) == 2 else kind_of(a, n in subscripted, False, lanes)
+            for n, a in zip(names, args, strict=True)
+        )
+        key = ("beside", *kinds)
+        if key not in self._drivers:
+            text = beside(self._text.definition, dict(zip(names, kinds, strict=True)), self._text.returns)
+            name = f"{self.plain.__module__}.{self.plain.__qualname__}.beside"
+            self._drivers[key] = None if text is None else _compile(text, name)
+        if self._drivers[key] is None:
+            return False
+        rows = [np.empty(lanes) for _ in range(len(self._text.moved) + self._text.returns)]
+        at_hand = [np.empty((_AT_HAND, lanes)) for kind in kinds if kind == "tile"]
+        self._drivers[key](lanes, stride, steps, int(keep), *map(passed, args, kinds), *rows, *at_hand)
+        return True
 
     @cached_property
     def _text(self) -> _Text:

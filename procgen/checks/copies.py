@@ -134,14 +134,21 @@ class Marks:
 
     def repeated(self) -> Marks:
         """Those whose hash is there more than once."""
-        hashes = np.sort(self.hashes)
-        return self.at(np.isin(self.hashes, np.unique(hashes[1:][hashes[1:] == hashes[:-1]])))
+        halves = (self.hashes >> np.uint64(24)).astype(np.uint32)  # half of the bits are sorted in half the time
+        some = self.at(np.isin(halves, _twice(halves)))
+        return some.at(np.isin(some.hashes, _twice(some.hashes)))
 
     def ordered(self) -> Marks:
         return self.at(np.lexsort((self.steps, self.paths, self.values, self.hashes)))
 
     def at(self, which: Any) -> Marks:
         return Marks(*(values[which] for values in self.arrays))
+
+
+def _twice(values: NDArray) -> NDArray:
+    """Those that are there more than once."""
+    ordered = np.sort(values)
+    return np.unique(ordered[1:][ordered[1:] == ordered[:-1]])
 
 
 class Watch:

@@ -325,3 +325,22 @@ def _least(row):
     for p in range(row.shape[0]):
         least = min(least, row[p])
     return least
+
+
+def divided(gaps, across, room, apart, found):
+    """The greatest common divisor of gaps that add up to `across`, as `grids` measures it; 0 where they have none."""
+    grid, error = gaps[0], room
+    for k in range(gaps.shape[0]):
+        grid = min(grid, gaps[k])
+    found[0] = 0.0
+    while grid > apart * (room + error * (across / grid)):
+        least, doubt = np.inf, 0.0
+        for k in range(gaps.shape[0]):
+            multiple = gaps[k] / grid
+            left, unsure = abs(multiple - np.rint(multiple)) * grid, room + multiple * error
+            if left > unsure and left < least:
+                least, doubt = left, unsure
+        if least == np.inf:
+            found[0] = across / np.rint(across / grid)
+            return
+        grid, error = least, doubt

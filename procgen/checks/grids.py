@@ -12,6 +12,8 @@ import math
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.chance.kernel import is_compiling
+from procgen.checks.blocks import in_one_pass
 from procgen.checks.words import many, number
 
 _TRIED = 32  # values of which a grid is sought
@@ -85,6 +87,9 @@ def _divisor(values: NDArray) -> float | None:
     """The greatest common divisor of the differences of ascending values; None where they have none."""
     if values.size < _FEWEST or not np.isfinite(values[-1] - values[0]):
         return None
+    few = values[:1]  # of values on no such grid one tells, as a rule
+    if not (np.rint(few * _SCALES) / _SCALES == few).any():
+        return _measured(values)
     scaled = np.rint(values * _SCALES)
     fits = (np.abs(scaled[:, [0, -1]]).max(axis=1) < _WHOLE) & (scaled / _SCALES == values).all(axis=1)
     if fits.any():
@@ -98,6 +103,10 @@ def _measured(values: NDArray) -> float | None:
     gaps, across = np.diff(values), float(values[-1] - values[0])
     room, grid = _room(values), float(gaps.min())
     error = room
+    if is_compiling():
+        found = np.empty(1)
+        in_one_pass("divided", gaps, across, room, _APART, found)
+        return float(found[0]) or None
     while grid > _APART * (room + error * (across / grid)):
         multiple = gaps / grid
         left, unsure = np.abs(multiple - np.rint(multiple)) * grid, room + multiple * error

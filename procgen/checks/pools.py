@@ -29,6 +29,7 @@ SHORT = (1, 2)  # lags, where recovered shocks say the rest
 SPREAD = (1, 2, 3, 4, 6, 8, 12, 16, 24, 32, 64, 128, 256)  # lags, up to a quarter of the window
 STRETCHES = (8, 32, 128)  # steps of a change
 SWAMPED = 0.5  # share of the variance that is between the averages of paths, from which on changes are judged too
+_MIRRORED = 1e-14  # of the largest element, to which a matrix and its mirror image are the same
 QUANTILES = (0.05, 0.25, 0.75, 0.95)  # below which shares of steps are counted
 
 
@@ -180,8 +181,8 @@ def _joint(plan: Any, window: NDArray) -> NDArray | None:
 def _eigenvalues(gamma: NDArray, lags: tuple[int, ...]) -> NDArray:
     """Eigenvalues of each average as a quadratic form in independent normals."""
     width = len(gamma)
-    parts = _parts(gamma)
-    values, vectors = np.linalg.eigh(parts)
+    apart = width % 2 == 0 and np.abs(gamma - gamma[::-1, ::-1]).max() <= _MIRRORED * np.abs(gamma).max()
+    values, vectors = np.linalg.eigh(_parts(gamma) if apart else gamma[None])
     roots = vectors * np.sqrt(np.maximum(values, 0.0))[:, None, :]
     rows = [np.zeros(width)]
     rows[0][0] = float(gamma.sum()) / width**2  # the variance of the mean over steps
@@ -191,21 +192,19 @@ def _eigenvalues(gamma: NDArray, lags: tuple[int, ...]) -> NDArray:
         form[at, at - lag] += 0.5
         form[at - lag, at] += 0.5
         form /= width - lag
-        forms = _parts(form) if len(parts) > 1 else form[None]
+        forms = _parts(form) if apart else form[None]
         own = np.linalg.eigvalsh(roots.transpose(0, 2, 1) @ forms @ roots) if lag else values / width
         rows.append(own.ravel())
     return np.array(rows)
 
 
 def _parts(a: NDArray) -> NDArray:
-    """Two matrices that have the eigenvalues of one between them, where it is the same when both its axes are turned.
+    """Two matrices that have the eigenvalues of one between them, which is the same when both its axes are turned.
 
     That of a steady series is (Cantoni & Butler 1976, Eigenvalues and eigenvectors of symmetric centrosymmetric
-    matrices); of others there is one part, the matrix. Half of the size costs an eighth.
+    matrices). Half of the size costs an eighth.
     """
     middle = len(a) // 2
-    if len(a) % 2 or not np.allclose(a, a[::-1, ::-1], rtol=0.0, atol=1e-14 * np.abs(a).max()):
-        return a[None]
     turned = a[:middle, : middle - 1 : -1]
     return np.array([a[:middle, :middle] + turned, a[:middle, :middle] - turned])
 

@@ -6,7 +6,7 @@ All numbers of theory are computed before the data are read. What theory does no
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, field
 from functools import cached_property, partial
 from typing import Any
@@ -216,9 +216,7 @@ def plan_series(
     plan.highest = float(theory.highest_moment or 0.0)
     plan.gaussian = bool(theory.gaussian)
     plan.period = next((p for p in periods if 1 < p < steps), None)
-    for i, j in plan.pairs:
-        value = theory.covariance(at[i : i + 1], at[j : j + 1])
-        plan.covariance[i, j] = None if value is None else float(np.ravel(value)[0])
+    plan.covariance.update(_between(plan))
     if not plan.unknown:
         _marginals(plan)
         if not plan.gaussian:
@@ -229,6 +227,15 @@ def plan_series(
     else:
         _laws_alone(plan)
     return plan
+
+
+def _between(plan: SeriesPlan) -> Iterator[tuple[tuple[int, int], float | None]]:
+    """Covariances at the pairs of probes, asked for at once; one by one where not all of them are known."""
+    first, second = (plan.steps[[pair[side] for pair in plan.pairs]] for side in (0, 1))
+    values = plan.theory.covariance(first, second) if plan.pairs else None
+    for k, pair in enumerate(plan.pairs):
+        value = plan.theory.covariance(first[k : k + 1], second[k : k + 1]) if values is None else values[k : k + 1]
+        yield pair, None if value is None else float(np.ravel(value)[0])
 
 
 def settled(variance: NDArray) -> NDArray:

@@ -85,7 +85,8 @@ def plan_relations(
     """
     found: list[Relation] = []
     candidates = [(weights, True) for weights in _candidates(graph)]
-    candidates += [(weights, False) for pair in apart if (weights := _together(theory, *pair, steps)) is not None]
+    sds: dict[str, float | None] = {}
+    candidates += [(weights, False) for pair in apart if (weights := _together(theory, *pair, steps, sds)) is not None]
     for weights, gap in candidates:
         if len(found) == MOST:
             break
@@ -116,18 +117,31 @@ def _is_gap(theory: Any, weights: Mapping[str, float], combined: SeriesTheory) -
     return all(members) and combined.stationarity.verdict != GROWS
 
 
-def _together(theory: Any, a: str, b: str, steps: int) -> dict[str, float] | None:
-    """Weights by which two steady series have a variance of 1 each, where some steps of both depend on each other."""
-    one, other = theory[a], theory[b]
-    if not all(type(x) is SeriesTheory and x.stationarity.covariance_stationary for x in (one, other)):
+def _together(theory: Any, a: str, b: str, steps: int, sds: dict[str, float | None]) -> dict[str, float] | None:
+    """Weights by which two steady series have a variance of 1 each, where some steps of both depend on each other.
+
+    `sds`: those of series that have been asked for.
+    """
+    for name in (a, b):
+        if name not in sds:
+            sds[name] = _steady_sd(theory[name])
+    one, other = sds[a], sds[b]
+    if one is None or other is None:
         return None
     reach = min(_LEADS, steps - 1)
     at = np.concatenate([np.arange(reach + 1), np.zeros(reach, np.int64)])
-    known = one.variance(0), other.variance(0), theory.cross(a, b).covariance(at, at[::-1])
-    if any(x is None or not np.isfinite(x).all() for x in known):
+    known = theory.cross(a, b).covariance(at, at[::-1])
+    if known is None or not np.isfinite(known).all() or np.max(np.abs(known)) <= _FELT * one * other:
         return None
-    sd = np.sqrt([float(known[0]), float(known[1])])
-    return None if np.max(np.abs(known[2])) <= _FELT * sd[0] * sd[1] else {a: 1.0 / sd[0], b: 1.0 / sd[1]}
+    return {a: 1.0 / one, b: 1.0 / other}
+
+
+def _steady_sd(series: Any) -> float | None:
+    """The standard deviation of a steady series, where it is known by itself."""
+    if type(series) is not SeriesTheory or not series.stationarity.covariance_stationary:
+        return None
+    variance = series.variance(0)
+    return None if variance is None or not np.isfinite(variance).all() else float(np.sqrt(float(variance)))
 
 
 def _candidates(graph: Any) -> Iterator[dict[str, float]]:

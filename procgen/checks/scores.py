@@ -6,7 +6,7 @@ independent of each other (Rosenblatt 1952). Counts in equal bins of u keep all 
 
 from __future__ import annotations
 
-from functools import cached_property
+from functools import cache, cached_property
 from typing import Any
 
 import numpy as np
@@ -134,20 +134,7 @@ class Scores:
         Columns 0 and 1 answer first to a shift and to a change of scale of z; the other six answer to neither,
         so they speak of the shape alone (Neyman 1937, smooth tests, with the two directions projected out).
         """
-        centre = (2 * np.arange(BINS) + 1) / BINS - 1
-        basis = np.polynomial.legendre.legvander(centre, _ORDER)[:, 1:]
-        basis -= basis.mean(axis=0)
-        gram = np.einsum("bi,bj->ij", basis, basis) / BINS
-        basis = np.einsum("bi,ij->bj", basis, np.linalg.inv(np.linalg.cholesky(gram)).T)
-        edges = np.arange(1, BINS) / BINS
-        q = self.distribution.ppf(edges)
-        density = self.distribution.pdf(q)
-        rise = np.diff(basis, axis=0)
-        level, spread = np.einsum("bi,b->i", rise, density), np.einsum("bi,b->i", rise, q * density)
-        spread_first = np.linalg.qr(np.column_stack([level, spread, np.eye(_ORDER)]))[0]
-        signs = np.sign([level @ spread_first[:, 0], spread @ spread_first[:, 1]])
-        spread_first[:, :2] *= np.where(signs == 0, 1.0, signs)
-        return np.einsum("bi,ij->bj", basis, spread_first)
+        return _normal_components() if self.gaussian else _components(self.distribution)
 
     @cached_property
     def component_laws(self) -> list[Summand]:
@@ -164,6 +151,30 @@ class Scores:
     def component_sums(self, counts: NDArray) -> NDArray:
         """(8,) standardised component sums, each asymptotically standard normal."""
         return (counts @ self.components) / np.sqrt(counts.sum())
+
+
+@cache
+def _normal_components() -> NDArray:
+    """Those of all normal shocks."""
+    return _components(Normal())
+
+
+def _components(distribution: Any) -> NDArray:
+    """See `Scores.components`."""
+    centre = (2 * np.arange(BINS) + 1) / BINS - 1
+    basis = np.polynomial.legendre.legvander(centre, _ORDER)[:, 1:]
+    basis -= basis.mean(axis=0)
+    gram = np.einsum("bi,bj->ij", basis, basis) / BINS
+    basis = np.einsum("bi,ij->bj", basis, np.linalg.inv(np.linalg.cholesky(gram)).T)
+    edges = np.arange(1, BINS) / BINS
+    q = distribution.ppf(edges)
+    density = distribution.pdf(q)
+    rise = np.diff(basis, axis=0)
+    level, spread = np.einsum("bi,b->i", rise, density), np.einsum("bi,b->i", rise, q * density)
+    spread_first = np.linalg.qr(np.column_stack([level, spread, np.eye(_ORDER)]))[0]
+    signs = np.sign([level @ spread_first[:, 0], spread @ spread_first[:, 1]])
+    spread_first[:, :2] *= np.where(signs == 0, 1.0, signs)
+    return np.einsum("bi,ij->bj", basis, spread_first)
 
 
 def largest_gap(counts: NDArray) -> float:

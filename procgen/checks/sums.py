@@ -163,6 +163,7 @@ class Kept:
 
     def __init__(self, size: int):
         self.rows = np.zeros((0, size))
+        self._asked: tuple[Sequence[int], NDArray, NDArray] | None = None  # places, all rows, and what was found
 
     def absorb(self, rows: NDArray) -> None:
         """Add the values (paths, size) of the paths that follow."""
@@ -175,4 +176,6 @@ class Kept:
 
     def values(self, places: Sequence[int]) -> NDArray:
         """(paths, size), paths left out where a value at one of the places is not finite."""
-        return self.rows[np.isfinite(self.rows[:, places]).all(axis=1)]
+        if self._asked is None or self._asked[0] != places or self._asked[1] is not self.rows:
+            self._asked = places, self.rows, self.rows[np.isfinite(self.rows[:, places]).all(axis=1)]
+        return self._asked[2]

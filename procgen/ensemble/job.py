@@ -25,7 +25,9 @@ from procgen.ensemble.present import Present
 from procgen.ensemble.source import FACTORY, Source, open_source, remember, revealable
 from procgen.ensemble.store import MANIFEST, Folder, folder_path
 from procgen.terms.given import spec_of
+from procgen.terms.hands import hands
 
+THREAD_WORTH = 250_000  # values that repay one more thread
 MOST = 2**48  # paths, and steps: far beyond what can be stored, and safe in every int64
 
 
@@ -164,6 +166,8 @@ def _in_memory(source: Source, whole: Block, workers: int | None, progress: Prog
     share = whole.rows * len(source.columns) // count
     # Threads are for compiled kernels: what the interpreter does goes one by one.
     compiled = repays(source, narrow, share)
+    if workers is None:
+        count = default_workers(whole.rows * len(source.columns), THREAD_WORTH)
     threads = count if compiled else 1
     tasks: dict[int, list[Block]] = {}
     for chain in chains(whole, size, threads):
@@ -173,10 +177,11 @@ def _in_memory(source: Source, whole: Block, workers: int | None, progress: Prog
 
     def draw(task: list[Block], tick: Tick) -> list[Any]:
         drawer = Drawer(source, tick, narrow, share)
-        for batch in task:
-            rows = slice(batch.first_path - whole.first_path, batch.end_path - whole.first_path)
-            span = slice(batch.first_step, batch.end_step)
-            drawer.fill(batch, {name: data[rows, span] for name, data in values.items()})
+        with hands(threads // len(tasks)):
+            for batch in task:
+                rows = slice(batch.first_path - whole.first_path, batch.end_path - whole.first_path)
+                span = slice(batch.first_step, batch.end_step)
+                drawer.fill(batch, {name: data[rows, span] for name, data in values.items()})
         return []
 
     engines.in_threads(draw, [*tasks.values()], threads, progress, whole.rows)

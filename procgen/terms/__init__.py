@@ -6,7 +6,7 @@ family. `level`, `walk`, `arma` and `garch` show the range. What they share:
 - What a term is: `base`. By which label it goes: `labels`. Which values it can have: `support`, and a whole series:
   `supports`.
 - A spec becomes a graph, and the graph values: `given`, `graph` and what it refuses (`misfits`), correlated shocks
-  (`mixing`), `run`, threads that share it (`hands`).
+  (`mixing`), `run`, threads that share it (`hands`), one long path beside itself (`pieces`).
 - The past: `start` and `vector_start` (stationary), `conditional` (of a variance), `burnt` (burn-ins), `exact` (from
   autocovariances), `vector_shapes` (what a system is given).
 - A recorded past, from which a series leaves: `past`, by undoing one source (`past_single`) or by a filter over a sum

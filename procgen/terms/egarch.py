@@ -10,7 +10,8 @@ from procgen.chance.kernel import kernel
 from procgen.chance.portable import exp, log
 from procgen.spec.declare import Parameter, Real
 from procgen.terms.base import LAW, Ahead, Unknown, number, signed, without_gap
-from procgen.terms.conditional import BEFORE, FORGOTTEN, INFINITE, Conditional, left_from
+from procgen.terms.conditional import BEFORE, FORGOTTEN, INFINITE, Conditional, left_from, row_of
+from procgen.terms.pieces import in_pieces
 from procgen.terms.rows import plain
 from procgen.terms.start import companion, decay_length
 
@@ -93,6 +94,9 @@ class Egarch(Conditional):
     def persistence(self):
         return self.beta if np.all(self.beta) else None  # one of 0 has nothing to forget
 
+    def fades(self):
+        return True
+
     def burn(self):
         """Steps until the log variance has forgotten where it began, to 1e-12."""
         return decay_length(companion((self.beta,), (), 1, 0)[0]) if self.beta else 0
@@ -112,8 +116,8 @@ class Egarch(Conditional):
     def recurse(self, inputs, state, at):
         z = inputs[0]
         logs = np.empty_like(z)
-        x = np.broadcast_to(state["x"][0], z.shape[1:]).copy()
-        x = log_recursion(self._sides(z), self.mean_log(), self.beta, logs, x)
+        start = self._sides(z), self.mean_log(), self.beta, logs, row_of(state["x"], z)
+        (x,) = in_pieces(log_recursion, self.early, *start)
         h = exp(logs, out=logs)
         return {"": np.sqrt(h) * z, "variance": h}, {"x": x[None, :]}
 

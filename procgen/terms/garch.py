@@ -9,7 +9,8 @@ import numpy as np
 from procgen.chance.kernel import kernel
 from procgen.spec.declare import Parameter, Reals, Record
 from procgen.terms.base import LAW, Ahead, number, rows, signed, stated, without_gap
-from procgen.terms.conditional import FORGOTTEN, INFINITE, OMEGA, SD, Conditional, burn_without_variance
+from procgen.terms.conditional import FORGOTTEN, INFINITE, OMEGA, SD, Conditional, burn_without_variance, row_of
+from procgen.terms.pieces import in_pieces
 from procgen.terms.rows import alike, plain
 from procgen.terms.start import companion, decay_length
 
@@ -29,6 +30,18 @@ def recursion(z, omega, alpha, beta, e, square, h):
         x = np.sqrt(v) * z[t]
         e[t] = x
         square[t + p] = x * x
+
+
+@kernel
+def first_order(z, omega, alpha, beta, e, variances, square, h):
+    """`recursion` of one α and one β, from rows; returns the last ones. What is only carried is not written."""
+    for t in range(z.shape[0]):
+        h = omega + alpha * square + beta * h
+        x = np.sqrt(h) * z[t]
+        e[t] = x
+        variances[t] = h
+        square = x * x
+    return square, h
 
 
 @kernel
@@ -133,6 +146,9 @@ class Garch(Conditional):
         weights = self._weights()
         return weights[0] if len(weights) == 1 else None
 
+    def fades(self):
+        return bool(np.all(_sum(self._weights()) < 1.0))
+
     def burn(self):
         """Steps until the variance has forgotten where it began, to 1e-12."""
         weights = self._weights()
@@ -155,8 +171,13 @@ class Garch(Conditional):
 
     def recurse(self, inputs, state, at):
         z = inputs[0]
-        p, q = len(self.alpha), len(self.beta)
-        square, h, e = _buffer(state["square"], z), _buffer(state["h"], z), np.empty_like(z)
+        p, q, e = len(self.alpha), len(self.beta), np.empty_like(z)
+        if p == q == 1:
+            h, past = np.empty_like(z), [row_of(state[name], z) for name in ("square", "h")]
+            coefficients = self.level(), self.alpha[0], self.beta[0]
+            square, last = in_pieces(first_order, self.early, z, *coefficients, e, h, *past)
+            return {"": e, "variance": h}, {"square": square[None, :], "h": last[None, :]}
+        square, h = _buffer(state["square"], z), _buffer(state["h"], z)
         recursion(z, self.level(), np.array(self.alpha), np.array(self.beta), e, square, h)
         state = {"square": square[len(square) - p :].copy(), "h": h[len(h) - q :].copy()}
         return {"": e, "variance": h[q:]}, state

@@ -18,7 +18,9 @@ from procgen.terms.conditional import (
     Conditional,
     burn_without_variance,
     left_from,
+    row_of,
 )
+from procgen.terms.pieces import in_pieces
 from procgen.terms.rows import plain
 from procgen.terms.start import companion, decay_length
 
@@ -106,6 +108,9 @@ class GjrGarch(Conditional):
     def persistence(self):
         return self.alpha + self.beta + self.gamma * downside(self.law)
 
+    def fades(self):
+        return bool(np.all(self.persistence() < 1.0))
+
     def burn(self):
         """Steps until the variance has forgotten where it began, to 1e-12."""
         persistence = self.persistence()
@@ -133,7 +138,7 @@ class GjrGarch(Conditional):
     def recurse(self, inputs, state, at):
         z = inputs[0]
         e, h = np.empty_like(z), np.empty_like(z)
-        following = recursion(z, *self._coefficients(), e, h, _row(state["h"], z))
+        (following,) = in_pieces(recursion, self.early, z, *self._coefficients(), e, h, row_of(state["h"], z))
         return {"": e, "variance": h}, {"h": following[None, :]}
 
     def invert(self, values, known, state, at):
@@ -141,7 +146,7 @@ class GjrGarch(Conditional):
         if state is None:
             state = {**(self.rest() if self.before is None else self.left()), "skip": np.array([0])}
         h = np.empty_like(values)
-        following = variance(values, *self._coefficients(), h, _row(state["h"], values))
+        following = variance(values, *self._coefficients(), h, row_of(state["h"], values))
         z = values / np.sqrt(h)
         skip = int(state["skip"][0])
         if gap or (at[0] == 0 and self.before is None):  # an unknown start of the variance must be forgotten first
@@ -191,7 +196,3 @@ def _without_variance(values, persistence):
             f"{_NAMED} must be below 1 for a finite variance, got {number(persistence)}; lower one, or say "
             "`allow_infinite_variance: true` to run it on purpose",
         )
-
-
-def _row(state, like):
-    return np.broadcast_to(state[0], like.shape[1:]).copy()

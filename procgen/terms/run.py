@@ -5,8 +5,10 @@ A `Run` is a pure function of the graph and the range: how its steps are cut int
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable, Mapping, Sequence
 from functools import cached_property, partial
+from itertools import pairwise
 from typing import Any
 
 import numpy as np
@@ -65,6 +67,15 @@ class Run:
         if not self._states:
             self._begin()
         return self._states[node.key]
+
+    def early(self) -> float:
+        """Steps after which the state is likely to be, to the last bit, that of any other past; inf where never."""
+        if not self._states:
+            self._begin()
+        if self.graph.pace > 1:
+            return math.inf
+        terms = [node.term for node in self._order if isinstance(node, Node)]
+        return sum([0 if isinstance(term, Hidden) else term.early() for term in terms])
 
     def restore(self, step: int, state: dict[str, Array]) -> None:
         """Go on from a state that `state()` gave after step `step` − 1 of the same paths."""
@@ -130,13 +141,28 @@ class Run:
     def _draw(self, source: Source, first_step: int, steps: int, values: dict[int, Array]) -> None:
         """Shocks of a source, and with it of every source whose normals it is mixed with."""
         if source.group is None:
-            u = source.stream.uniforms(self.first_path, self.paths, first_step, steps)
-            values[id(source)] = source.law.shocks(u, out=u)
+            values[id(source)] = self._alone(source, first_step, steps)
         else:
             states = None if source.group.by is None else values[id(source.group.by)]
             mixed = self._mixed(source.group, first_step, steps, states)
             for member, z in zip(source.group.sources, mixed, strict=True):
                 values[id(member)] = z
+
+    def _alone(self, source: Source, first_step: int, steps: int) -> Array:
+        """Shocks of a source that is mixed with no other; many are shared among threads by their steps."""
+        count = at_hand()
+        if count == 1 or steps * self.paths < SHARED:
+            u = source.stream.uniforms(self.first_path, self.paths, first_step, steps)
+            return source.law.shocks(u, out=u)
+        out = np.empty((steps, self.paths))
+
+        def fill(span: tuple[int, int]) -> None:
+            rows = out[slice(*span)]
+            source.stream.uniforms(self.first_path, self.paths, first_step + span[0], len(rows), out=rows)
+            source.law.shocks(rows, out=rows)
+
+        each(fill, [*pairwise([steps * k // count for k in range(count + 1)])])
+        return out
 
     def _mixed(self, group: Group, first_step: int, steps: int, states: Array | None) -> list[Array]:
         def fill(place: int, rows: Array) -> None:
@@ -224,6 +250,7 @@ class Run:
         return node
 
 
+SHARED = 1 << 14  # shocks that repay to be drawn by several threads
 LARGEST = 1 << 18  # values that a term with finer steps has at once
 
 
