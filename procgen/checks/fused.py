@@ -1,4 +1,4 @@
-"""What `shocks`, `structure` and `copies` do with a tile, compiled: each in one pass instead of dozens.
+"""What `shocks`, `structure`, `copies`, `pools` and `grids` do, compiled: each in one pass instead of dozens.
 
 Called by `blocks.in_one_pass`, for tiles (steps, paths) of finite values in one piece of memory; imported only where
 there is no machine code yet (numba, the extra `speed`). Every sum adds the same numbers in the same order as the plain

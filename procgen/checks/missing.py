@@ -79,8 +79,7 @@ def adapted(plan: Any, gaps: dict[str, Any]) -> Any:
         elif any(isinstance(way.kalman, GapKalman) for way in ways) and plan.shock_pairs[names] != Expected():
             unknown = f"{_WHY}: what prediction errors beside them have in common is not computed"
             plan.shock_pairs[names] = Expected(unknown=unknown)
-    plan.gaps = gaps
-    return plan
+    return replace(plan, gaps=gaps)  # made anew, as what is summed follows from what is judged
 
 
 def through(way: Route | Cannot) -> Route | Cannot:
