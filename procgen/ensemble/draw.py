@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+import math
+from collections.abc import Callable, Iterator, Mapping
 from functools import partial
 
 import numpy as np
@@ -12,12 +13,14 @@ from procgen.ensemble.columns import Column
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.plan import CACHED, TILE, Block, lanes, tiles
 from procgen.ensemble.source import Run, Source
-from procgen.terms.hands import done, each
+from procgen.terms.hands import at_hand, done, each
 
 Tick = Callable[[int], None]  # called with the rows just drawn; may raise to stop the work
 State = dict[str, np.ndarray]
 
 WIDE_REPAYS = 8_000_000  # values of terms that gain, some 50 ns each; until then they are drawn plain
+APART = 8  # times the steps that are run for nothing which each run of steps of one path must have
+APART_LEAST = 1 << 16
 REUSED = 24 << 20  # bytes of a block of memory
 COMPILING_REPAYS = 1_000_000  # narrow steps; each costs 1 to 7 µs in the interpreter, and compiling a second or two
 LOADING_REPAYS = 100_000  # the same where there is machine code, which is loaded in 0.06 s
@@ -50,21 +53,62 @@ class Drawer:
             self.compile = self.compile or self._left < 0
 
     def _rows(self, block: Block, out: Mapping[str, np.ndarray]) -> None:
-        run, step = self._run(block), block.first_step
-        compiling = kernel.is_compiling()
-        count = len(self.source.columns)
-        most = max(CACHED, TILE // count if block.paths == 1 else 0) if compiling else TILE
-        for steps in tiles(block.steps, block.paths, count, most):
+        run = self._run(block)
+        alone = kernel.is_compiling() and block.paths == 1 and at_hand() > 1
+        early = getattr(run, "early", lambda: math.inf)() if alone else math.inf
+        if block.steps < at_hand() * max(APART * early, APART_LEAST):
+            self._steps(run, block, out)
+        else:
+            self._runs[block.first_path, block.paths] = self._apart(run, int(early), block, out)
+
+    def _apart(self, run: Run, early: int, block: Block, out: Mapping[str, np.ndarray]) -> Run:
+        """Draw a block of one path in as many runs of steps as there are threads; the run that ends where it ends.
+
+        Each but the first is begun `early` steps before its own, from a state that is a guess. What it was at the first
+        of its own steps is held against what the run before ended with, bit by bit; where it differs, that one goes on.
+        """
+        parts, guess = [*_steps(block, -(-block.steps // at_hand()))], run.state()
+
+        def draw(part: Block) -> tuple[Run, State] | None:
+            if part.first_step == block.first_step:
+                self._steps(run, part, out, block)
+                return run, {}
+            own = self.source.run(part.first_path, part.paths)
+            own.restore(part.first_step - early, guess)
+            try:
+                if early:
+                    with np.errstate(all="ignore"):
+                        own.tile(early)
+                began = {name: rows.copy() for name, rows in own.state().items()}
+                self._steps(own, part, out, block)
+            except EnsembleError:  # of what was guessed, it may be; what is drawn again says so if not
+                return None
+            return own, began
+
+        found = each(draw, parts)
+        for part, drawn in zip(parts[1:], found[1:], strict=True):
+            if drawn is not None and _are_same(drawn[1], run.state()):
+                run = drawn[0]
+            else:
+                self._steps(run, part, out, block, again=True)
+        return run
+
+    def _steps(
+        self, run: Run, part: Block, out: Mapping[str, np.ndarray], block: Block | None = None, again: bool = False
+    ) -> None:
+        """The next steps of a run, `part` of a block, into arrays that have the block's steps."""
+        step, begin = part.first_step, (block or part).first_step
+        compiling, columns = kernel.is_compiling(), self.source.columns
+        most = max(CACHED, TILE // len(columns) if part.paths == 1 and at_hand() > 1 else 0) if compiling else TILE
+        for steps in tiles(part.steps, part.paths, len(columns), most):
             with np.errstate(all="ignore"):  # what is not finite is refused below, with its place
                 tile = run.tile(steps)
-            start = step - block.first_step
-            columns = self.source.columns
-            turning = [partial(turn, tile[column.name], out[column.name], start) for column in columns]
+            turning = [partial(turn, tile[column.name], out[column.name], step - begin) for column in columns]
             for column, (infinite, unknown) in zip(columns, each(done, turning), strict=True):
                 if infinite or (unknown and not column.gaps):
-                    raise _not_finite(column, tile[column.name], block.first_path, step)
+                    raise _not_finite(column, tile[column.name], part.first_path, step)
             step += steps
-            self.tick(block.paths * steps)
+            self.tick(0 if again else part.paths * steps)
 
     def _run(self, block: Block) -> Run:
         key = (block.first_path, block.paths)
@@ -96,6 +140,20 @@ class Drawer:
             states = self._states.setdefault((int(first), int(paths)), (step, {}))[1]
             if name:
                 states[name] = values
+
+
+def _steps(block: Block, steps: int) -> Iterator[Block]:
+    """A block in runs of so many steps."""
+    for first in range(block.first_step, block.end_step, steps):
+        yield Block(block.first_path, block.paths, first, min(steps, block.end_step - first))
+
+
+def _are_same(some: State, others: State) -> bool:
+    """Whether two states are the same bits."""
+    if some.keys() != others.keys():
+        return False
+    pairs = [(rows, others[name]) for name, rows in some.items()]
+    return all(a.shape == b.shape and a.dtype == b.dtype and a.tobytes() == b.tobytes() for a, b in pairs)
 
 
 def repays(source: Source, narrow_steps: int, share: int) -> bool:

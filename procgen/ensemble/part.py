@@ -23,7 +23,7 @@ from procgen.ensemble.places import place_of
 from procgen.ensemble.plan import Block, Chain, batches, narrow_steps
 from procgen.ensemble.source import FACTORY, Source, open_source
 from procgen.ensemble.store import Folder
-from procgen.terms.hands import done, each, hands
+from procgen.terms.hands import at_hand, behind, done, each, hands
 
 
 @dataclass(frozen=True)
@@ -118,17 +118,23 @@ def _render_part(task: Task, part: Block, source: Source, drawer: Drawer, folder
     columns = as_kept(source.columns, task.types)
     last = part.end_step == task.whole.end_step
     digests = Digests(part, columns)
+    two = part.paths == 1 and at_hand() > 1  # buffers: one is written while the other is drawn into
     buffers: dict[str, np.ndarray] = {}
-    with writing(folder, name, part, layout, columns, source.stamps, task.identity) as writer:
-        for batch in batches(part, row_bytes(columns), task.chain[0].steps):
+    other: dict[str, np.ndarray] = {}
+    with writing(folder, name, part, layout, columns, source.stamps, task.identity) as writer, behind() as later:
+        for batch in batches(part, row_bytes(columns) << two, task.chain[0].steps):
+            if two:
+                buffers, other = other, buffers
             if not buffers or buffers[columns[0].name].shape != (batch.paths, batch.steps):
                 buffers = together(batch, columns)
             drawer.fill(batch, buffers)
             with kernel.compiling(drawer.compile or kernel.is_compiling()):
                 kept = each(done, [partial(store, buffers[column.name], column) for column in columns])
             stored = {column.name: values for column, values in zip(columns, kept, strict=True)}
-            calls: list[Callable[[], None]] = [partial(writer.write, batch, stored)]
-            each(done, calls + digests.adding(batch, buffers, stored))
+            later.begin(partial(writer.write, batch, stored))
+            each(done, digests.adding(batch, buffers, stored))
+            if not two:
+                later.end()
             if last and batch.end_step == part.end_step:
                 drawer.forget(batch)
         writer.nodes = digests.packed(task.whole)

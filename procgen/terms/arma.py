@@ -19,6 +19,7 @@ from procgen.terms.start import (
     companion,
     decay_length,
     decay_lengths,
+    lasting,
     partial_autocorrelations,
 )
 
@@ -215,6 +216,11 @@ class Arma(Term):
         rest = {"x": self._settled(past, before.normals(len(self.phi))), "a": past}
         values, state = burnt(self, lengths, rest, before.head, a)
         return np.zeros((0, len(paths))) if values is None else values[""], state
+
+    def early(self):
+        if self.values.get("before") or row_in((self.phi, self.theta)) or len(self.phi) > DENSE:
+            return np.inf
+        return lasting(lambda: self._memory if self.phi else 0) + len(self.theta)
 
     def recurse(self, inputs, state, at):
         a = inputs[0]

@@ -152,6 +152,13 @@ class Term:
         """Whether it has draws of its own, beside any shock that drives it."""
         return cls.draws is not Term.draws
 
+    def early(self) -> float:
+        """Steps after which its state is likely to be, to the last bit, that of any other past; 0 where it has none.
+
+        inf where that is never so, or where a state of another step would not do.
+        """
+        return np.inf
+
     def draws(self) -> tuple[Draw, ...]:
         """The primary streams that the term needs, in the order in which ``recurse`` receives them."""
         return ()

@@ -31,6 +31,9 @@ class Sum(Term):
     def begin(self, before):
         return _added([part[len(part) - before.head :] for part in before.inputs]), {}
 
+    def early(self):
+        return 0
+
     def recurse(self, inputs, state, at):
         return _added(inputs), state
 
@@ -73,6 +76,9 @@ class Scaled(Term):
 
     def begin(self, before):
         return self.factor * before.inputs[0][len(before.inputs[0]) - before.head :], {}
+
+    def early(self):
+        return 0
 
     def recurse(self, inputs, state, at):
         return self.factor * inputs[0], state

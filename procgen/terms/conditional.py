@@ -12,11 +12,12 @@ from procgen.spec.declare import Flag, Parameter, Real, Reals, Record
 from procgen.terms.base import Draw, Term, rows, stated
 from procgen.terms.burnt import BURN_TILE, burnt
 from procgen.terms.rows import each_path, row_in
-from procgen.terms.start import decay_lengths
+from procgen.terms.start import decay_lengths, lasting
 
 # What is left of an unknown first variance where recovered shocks begin, as a share. Shocks of few values are told
 # apart to 1e-6 of their size, and a first variance may be hundreds of times the next: 1e-7 would be too much.
 FORGOTTEN = 1e-9
+BURN_LEAST = 4_096  # values of a tile of a burn-in, for few paths
 OMEGA = Parameter("omega", "ω", Real(above=0), "the constant in the variance", default=None, unit="series²")
 SD = Parameter(
     "sd", "σ", Real(above=0), "unconditional standard deviation, instead of `omega`", default=None, unit="series"
@@ -65,8 +66,7 @@ class Conditional(Term):
         raise NotImplementedError
 
     def early(self):
-        """Steps after which a state does not tell any more, to the last bit, where it began: `burn` is to 1e-12."""
-        return int(self.burns.max()) * 4 // 3 if self.fades() else math.inf
+        return lasting(lambda: self.burns.max()) if self.fades() else math.inf
 
     def rest(self):
         raise NotImplementedError
@@ -110,9 +110,10 @@ class Conditional(Term):
         """Values at steps −head … −1 and the state at step 0, from `state` on, tile by tile."""
         (count,) = self.reach(before.head)
         z, kept = before.inputs[0], []
-        for first in range(len(z) - count, len(z), BURN_TILE):
-            values, state = self.recurse((z[first : min(first + BURN_TILE, len(z))],), state, None)
-            if first + BURN_TILE > len(z) - before.head:
+        size = max(BURN_TILE, BURN_LEAST // max(z[:0].shape[1], 1))
+        for first in range(len(z) - count, len(z), size):
+            values, state = self.recurse((z[first : min(first + size, len(z))],), state, None)
+            if first + size > len(z) - before.head:
                 kept.append(values)
         if not before.head:
             return None, state

@@ -85,6 +85,47 @@ def each(work: Callable[[Item], Found], items: Sequence[Item]) -> list[Found]:
     return shared.found
 
 
+@contextmanager
+def behind() -> Iterator[Behind]:
+    """What makes one call at a time beside this thread; all has ended, and what was raised is raised, at the end."""
+    ours = Behind()
+    try:
+        yield ours
+        ours.end()
+    finally:
+        ours.wait()
+
+
+class Behind:
+    """A call that one more thread makes while this one goes on; without other hands, this one makes it at once."""
+
+    def __init__(self) -> None:
+        self._last: tuple[threading.Thread, _Shared] | None = None
+
+    def begin(self, call: Callable[[], object]) -> None:
+        """Have a call made, once the one before has ended; what that raised is raised here."""
+        self.end()
+        if at_hand() == 1:
+            call()
+            return
+        shared, context = _Shared(done, [call]), copy_context()
+        context.run(_hands.set, None)
+        self._last = threading.Thread(target=partial(context.run, shared.help, np.geterr()), daemon=True), shared
+        self._last[0].start()
+
+    def end(self) -> None:
+        """Wait for the call, and raise what it raised."""
+        last = self.wait()
+        if last is not None and last.errors:
+            raise last.errors[0]
+
+    def wait(self) -> _Shared | None:
+        last, self._last = self._last, None
+        if last is not None:
+            last[0].join()
+        return last and last[1]
+
+
 def done(call: Callable[[], Found]) -> Found:
     """What a call gives: so `each` makes calls."""
     return call()

@@ -23,6 +23,9 @@ class Known(Term):
     def begin(self, before):
         return self._column(np.arange(-before.head, 0)), {}
 
+    def early(self):
+        return 0
+
     def recurse(self, inputs, state, at):
         return self._column(at), state
 

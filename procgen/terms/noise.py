@@ -67,6 +67,9 @@ class WhiteNoise(Term):
             return before.joint[0][: before.head][::-1], {}
         return self.scale() * before.inputs[0][len(before.inputs[0]) - before.head :], {}
 
+    def early(self):
+        return 0
+
     def recurse(self, inputs, state, at):
         return self.scale() * inputs[0], state
 

@@ -5,6 +5,7 @@ A `Run` is a pure function of the graph and the range: how its steps are cut int
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable, Mapping, Sequence
 from functools import cached_property, partial
 from itertools import pairwise
@@ -66,6 +67,15 @@ class Run:
         if not self._states:
             self._begin()
         return self._states[node.key]
+
+    def early(self) -> float:
+        """Steps after which the state is likely to be, to the last bit, that of any other past; inf where never."""
+        if not self._states:
+            self._begin()
+        if self.graph.pace > 1:
+            return math.inf
+        terms = [node.term for node in self._order if isinstance(node, Node)]
+        return sum([0 if isinstance(term, Hidden) else term.early() for term in terms])
 
     def restore(self, step: int, state: dict[str, Array]) -> None:
         """Go on from a state that `state()` gave after step `step` − 1 of the same paths."""
@@ -140,6 +150,10 @@ class Run:
 
     def _alone(self, source: Source, first_step: int, steps: int) -> Array:
         """Shocks of a source that is mixed with no other; many are shared among threads by their steps."""
+        count = at_hand()
+        if count == 1 or steps * self.paths < SHARED:
+            u = source.stream.uniforms(self.first_path, self.paths, first_step, steps)
+            return source.law.shocks(u, out=u)
         out = np.empty((steps, self.paths))
 
         def fill(span: tuple[int, int]) -> None:
@@ -147,7 +161,6 @@ class Run:
             source.stream.uniforms(self.first_path, self.paths, first_step + span[0], len(rows), out=rows)
             source.law.shocks(rows, out=rows)
 
-        count = at_hand() if out.size >= SHARED else 1
         each(fill, [*pairwise([steps * k // count for k in range(count + 1)])])
         return out
 

@@ -11,7 +11,7 @@ Everything here makes values: only portable operations (see `procgen.chance.port
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
 from functools import cached_property
 from typing import Any
@@ -162,6 +162,17 @@ def decay_length(a: Array, negligible: float = NEGLIGIBLE) -> int:
         if np.max(np.abs(further)) > negligible:
             n, reached = n + (1 << k), further
     return n + 1
+
+
+def lasting(length: Callable[[], int]) -> float:
+    """Steps until nothing is left to the last bit where `length` gives those until 1e-12 is; inf for more than it can.
+
+    For the last bits, which are rounded away at random, there are some more.
+    """
+    try:
+        return int(length()) * 3 // 2 + 32
+    except ValueError:
+        return np.inf
 
 
 def _decay_of_one(a: float, negligible: float) -> int:

@@ -3,6 +3,7 @@
 import sys
 import threading
 import time
+from functools import partial
 
 import numpy as np
 import pytest
@@ -12,7 +13,7 @@ from procgen.chance import kernel
 from procgen.ensemble import draw, job, part, plan
 from procgen.terms.given import spec_of
 from procgen.terms.graph import build
-from procgen.terms.hands import at_hand, each, hands
+from procgen.terms.hands import at_hand, behind, each, hands
 from procgen.terms.run import strands
 from tests.golden_specs import NAMES, one_small
 
@@ -85,6 +86,53 @@ def test_an_error_is_raised_when_no_thread_is_at_work_any_more():
         seen = len(left)
         time.sleep(0.1)
         assert len(left) == seen < 100
+
+
+def test_what_is_behind_is_one_call_at_a_time_and_has_ended_in_the_end():
+    made = []
+
+    def call(k):
+        made.append(k)
+        time.sleep(0.02)
+        made.append(k)
+
+    with hands(2), behind() as later:
+        for k in range(5):
+            later.begin(partial(call, k))
+    assert made == [0, 0, 1, 1, 2, 2, 3, 3, 4, 4]
+    with behind() as later:  # nobody else is there
+        later.begin(partial(call, 5))
+        assert made[-2:] == [5, 5]
+    assert threading.active_count() == 1
+
+
+def test_what_a_call_behind_raises_is_raised_by_what_waits_for_it_and_an_error_waits_too():
+    def wrong():
+        raise OSError("full")
+
+    with hands(2):
+        with pytest.raises(OSError, match="full"), behind() as later:
+            later.begin(wrong)
+            later.begin(lambda: None)
+        with pytest.raises(OSError, match="full"), behind() as later:
+            later.begin(wrong)
+        left = []
+        with pytest.raises(ValueError, match="drawn"), behind() as later:
+            later.begin(lambda: (time.sleep(0.05), left.append(1)))
+            raise ValueError("drawn")
+        assert left == [1]
+
+
+def test_one_path_written_while_it_is_drawn_has_the_same_values(tmp_path, monkeypatch):
+    spec = {
+        "procgen": 1, "seed": 1, "paths": 1, "time": {"steps": 5_000},
+        "series": {"x": [{"ar": {"phi": 0.5, "sd": 1}}], "y": [{"poisson": {"mean": 3}}]},
+    }  # fmt: skip
+    one = pg.render(spec, workers=1).digest
+    monkeypatch.setattr(plan, "ALONE_BYTES", 2 * 8 * 300)
+    monkeypatch.setattr(part, "hands", lambda count: hands(3))
+    found = pg.render(spec, tmp_path / "out", workers=1)
+    assert found.digest == one and np.array_equal(found["x"], pg.render(spec, workers=1)["x"])
 
 
 def test_threads_compile_and_treat_overflows_as_their_caller_does():
