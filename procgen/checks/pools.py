@@ -17,7 +17,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.checks import rounding
-from procgen.checks.blocks import Window, across, add_products, compiled, in_one_pass, scratch
+from procgen.checks.blocks import Window, across, add_products, all_known, compiled, in_one_pass, scratch
 from procgen.checks.slow import Slow, SlowLane, plan_slow
 from procgen.theory.lumps import atoms_of
 from procgen.theory.verdict import STRICT
@@ -274,8 +274,13 @@ class PoolLane:
                 kept[i] = x[each.steps[i] - step]
         for total, start, end, mean in self._halves(step, len(x)):
             rows = np.subtract(x[start:end], mean[:, None], out=scratch(end - start, x.shape[1], 1))
-            self.unknown |= ~np.isfinite(rows).all(axis=0)
+            self._look(rows)
             add_products(total, rows, None, start)
+
+    def _look(self, rows: NDArray) -> None:
+        """Note the paths of rows in which not all is known."""
+        if not all_known(rows):
+            self.unknown |= ~np.isfinite(rows).all(axis=0)
 
     def absorb_sum(self, x: NDArray, y: NDArray, weights: Sequence[float], step: int) -> bool:
         """Add the averages of a tile of weights[0] · x + weights[1] · y; whether that is all but for the window.
@@ -315,7 +320,7 @@ class PoolLane:
         at = step + start - pool.first  # place of the first new row in the window
         mean = pool.mean[at : at + end - start, None]
         rows = np.subtract(x[start:end], mean, out=scratch(end - start, x.shape[1], 1))
-        self.unknown |= ~np.isfinite(rows).all(axis=0)
+        self._look(rows)
         add_products(self.sums[0], rows, None, start)
         both = self.window.push(rows)
         for k, lag in enumerate(pool.lags):
