@@ -3,7 +3,8 @@
 The deviation itself, its square, and lagged products: the products themselves where their law is exact, else what is
 left of them beside the stated slope, x(t) x(t - lag) - slope x(t - lag)^2, whose law is hardly skewed. Where no shocks
 can be recovered there are more lags, and: changes over stretches of steps (Lo & MacKinlay 1988), of what is not
-stationary; of what is, how far the averages of paths lie apart, and the shares of steps below quantiles of the law.
+stationary or lies at a level of its own in each path; of what is stationary, how far the averages of paths lie apart,
+and the shares of steps below quantiles of the law.
 """
 
 from __future__ import annotations
@@ -27,6 +28,7 @@ WINDOW = 4096  # steps of a pooled statistic without one
 SHORT = (1, 2)  # lags, where recovered shocks say the rest
 SPREAD = (1, 2, 3, 4, 6, 8, 12, 16, 24, 32, 64, 128, 256)  # lags, up to a quarter of the window
 STRETCHES = (8, 32, 128)  # steps of a change
+SWAMPED = 0.5  # share of the variance that is between the averages of paths, from which on changes are judged too
 _MIRRORED = 1e-14  # of the largest element, to which a matrix and its mirror image are the same
 QUANTILES = (0.05, 0.25, 0.75, 0.95)  # below which shares of steps are counted
 
@@ -121,9 +123,15 @@ def plan_pool(plan: Any, steps: int, blind: bool) -> Pool | None:
     if blind and not pool.coarse:
         if plan.theory.stationarity.covariance_stationary:
             pool.level, pool.shares = _level(plan, steps), _shares(plan, first)
-        else:
-            pool.changes = tuple(filter(None, (_changes(plan, steps, length) for length in STRETCHES)))
+        if not plan.theory.stationarity.covariance_stationary or _swamped(pool):
+            lengths = (1, *STRETCHES) if pool.level else STRETCHES
+            pool.changes = tuple(filter(None, (_changes(plan, steps, length) for length in lengths)))
     return pool
+
+
+def _swamped(pool: Pool) -> bool:
+    """Whether the levels of paths, such as drawn ones, hide in products what moves about them; changes have none."""
+    return pool.level is not None and pool.level.variance > SWAMPED * float(pool.covariance[0].mean())
 
 
 def noise(grain: float) -> float:
