@@ -7,6 +7,7 @@ tile does not show. What is not finite is left out.
 
 from __future__ import annotations
 
+import math
 import threading
 from collections.abc import Sequence
 from functools import cache
@@ -74,6 +75,11 @@ def in_one_pass(name: str, *args: Any, module: str = "fused") -> None:
 def in_few(name: str, *args: Any) -> None:
     """Call a function of `fused_few`, which goes along the paths one by one."""
     in_one_pass(name, *args, module="fused_few")
+
+
+def all_known(z: NDArray) -> bool:
+    """Whether all of an array is finite: its product with itself tells, but for an overflow, in half the time."""
+    return (z.flags.c_contiguous and math.isfinite(np.dot(z.ravel(), z.ravel()))) or bool(np.isfinite(z).all())
 
 
 def across(x: NDArray) -> NDArray:

@@ -51,7 +51,7 @@ def farthest(
     with np.errstate(invalid="ignore"):
         if worst is None:
             worst = np.fmax(np.fmax.reduce(g, axis=1), -np.fmin.reduce(g, axis=1))
-        elif len(worst) > KEPT:  # as many rows have one that is as large as the least of the KEPT largest of them
+        elif np.count_nonzero(worst > least) > KEPT:  # the KEPT largest of these are enough, a row has one at least
             least = max(least, float(np.nextafter(np.partition(worst, -KEPT)[-KEPT], 0.0)))
         if not (worst > least).any():
             return list(known)

@@ -3,7 +3,8 @@
 The deviation itself, its square, and lagged products: the products themselves where their law is exact, else what is
 left of them beside the stated slope, x(t) x(t - lag) - slope x(t - lag)^2, whose law is hardly skewed. Where no shocks
 can be recovered there are more lags, and: changes over stretches of steps (Lo & MacKinlay 1988), of what is not
-stationary; of what is, how far the averages of paths lie apart, and the shares of steps below quantiles of the law.
+stationary or lies at a level of its own in each path; of what is stationary, how far the averages of paths lie apart,
+and the shares of steps below quantiles of the law.
 """
 
 from __future__ import annotations
@@ -17,7 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.checks import rounding
-from procgen.checks.blocks import Window, across, add_products, compiled, in_one_pass, scratch
+from procgen.checks.blocks import Window, across, add_products, all_known, compiled, in_one_pass, scratch
 from procgen.checks.slow import Slow, SlowLane, plan_slow
 from procgen.theory.lumps import atoms_of
 from procgen.theory.verdict import STRICT
@@ -27,6 +28,7 @@ WINDOW = 4096  # steps of a pooled statistic without one
 SHORT = (1, 2)  # lags, where recovered shocks say the rest
 SPREAD = (1, 2, 3, 4, 6, 8, 12, 16, 24, 32, 64, 128, 256)  # lags, up to a quarter of the window
 STRETCHES = (8, 32, 128)  # steps of a change
+SWAMPED = 0.5  # share of the variance that is between the averages of paths, from which on changes are judged too
 _MIRRORED = 1e-14  # of the largest element, to which a matrix and its mirror image are the same
 QUANTILES = (0.05, 0.25, 0.75, 0.95)  # below which shares of steps are counted
 
@@ -121,9 +123,15 @@ def plan_pool(plan: Any, steps: int, blind: bool) -> Pool | None:
     if blind and not pool.coarse:
         if plan.theory.stationarity.covariance_stationary:
             pool.level, pool.shares = _level(plan, steps), _shares(plan, first)
-        else:
-            pool.changes = tuple(filter(None, (_changes(plan, steps, length) for length in STRETCHES)))
+        if not plan.theory.stationarity.covariance_stationary or _swamped(pool):
+            lengths = (1, *STRETCHES) if pool.level else STRETCHES
+            pool.changes = tuple(filter(None, (_changes(plan, steps, length) for length in lengths)))
     return pool
+
+
+def _swamped(pool: Pool) -> bool:
+    """Whether the levels of paths, such as drawn ones, hide in products what moves about them; changes have none."""
+    return pool.level is not None and pool.level.variance > SWAMPED * float(pool.covariance[0].mean())
 
 
 def noise(grain: float) -> float:
@@ -274,8 +282,13 @@ class PoolLane:
                 kept[i] = x[each.steps[i] - step]
         for total, start, end, mean in self._halves(step, len(x)):
             rows = np.subtract(x[start:end], mean[:, None], out=scratch(end - start, x.shape[1], 1))
-            self.unknown |= ~np.isfinite(rows).all(axis=0)
+            self._look(rows)
             add_products(total, rows, None, start)
+
+    def _look(self, rows: NDArray) -> None:
+        """Note the paths of rows in which not all is known."""
+        if not all_known(rows):
+            self.unknown |= ~np.isfinite(rows).all(axis=0)
 
     def absorb_sum(self, x: NDArray, y: NDArray, weights: Sequence[float], step: int) -> bool:
         """Add the averages of a tile of weights[0] · x + weights[1] · y; whether that is all but for the window.
@@ -315,7 +328,7 @@ class PoolLane:
         at = step + start - pool.first  # place of the first new row in the window
         mean = pool.mean[at : at + end - start, None]
         rows = np.subtract(x[start:end], mean, out=scratch(end - start, x.shape[1], 1))
-        self.unknown |= ~np.isfinite(rows).all(axis=0)
+        self._look(rows)
         add_products(self.sums[0], rows, None, start)
         both = self.window.push(rows)
         for k, lag in enumerate(pool.lags):

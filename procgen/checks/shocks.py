@@ -6,7 +6,6 @@ cutting. A :class:`ShockLane` carries what the next tile of the same paths needs
 
 from __future__ import annotations
 
-import math
 from collections import Counter
 from collections.abc import Sequence
 from dataclasses import dataclass, field
@@ -23,6 +22,7 @@ from procgen.checks.blocks import (
     across,
     add_lagged,
     add_products,
+    all_known,
     compiled,
     in_few,
     in_one_pass,
@@ -138,7 +138,7 @@ class ShockSums:
 
         Where the first of a path are unknown, as those of a variance that begins anywhere, the rest goes at once.
         """
-        whole = _all_known(z)
+        whole = all_known(z)
         cut = 0 if whole or not is_compiling() else _known_from(z)
         if not 0 < cut < len(z):
             self._absorb(z, first_step, lane, x, whole)
@@ -332,11 +332,6 @@ class ShockSums:
 
 
 SHOCK_ARRAYS = ("sums", "counts", "paths", "profile", "memory", "cluster", "asymmetry", "square", "stretched", "phases")
-
-
-def _all_known(z: NDArray) -> bool:
-    """Whether all of an array is finite: its product with itself tells, but for an overflow, in half the time."""
-    return (z.flags.c_contiguous and math.isfinite(np.dot(z.ravel(), z.ravel()))) or bool(np.isfinite(z).all())
 
 
 def _known_from(z: NDArray) -> int:

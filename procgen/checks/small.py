@@ -39,7 +39,7 @@ class Steps:
         for i, gain in enumerate(self.gains):
             row = c @ self.moved
             self.seen[i] = row * self.scales[i]
-            self.moved = a @ self.moved - np.outer(gain, row)
+            self.moved = a @ self.moved - gain[:, None] * row
 
     def take(self, y: NDArray, mean: NDArray, start: NDArray, out: NDArray) -> NDArray:
         """Innovations, into `out`, of rows that are a whole number of chunks; the state (d, paths) after them."""

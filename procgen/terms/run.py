@@ -77,7 +77,7 @@ class Run:
         steps = 0.0
         for node in self._order:
             if isinstance(node, Node) and not isinstance(node.term, Hidden):
-                steps = steps + node.term.early()
+                steps += node.term.early()
         return steps
 
     def restore(self, step: int, state: dict[str, Array]) -> None:

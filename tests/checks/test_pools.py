@@ -223,3 +223,22 @@ def test_a_level_by_path_that_is_not_there_is_found(name):
     assert what in {row.what for row in found.rows if row.outcome == "departs"}, found.text()
     assert found.headline[0].startswith("x: memory: ")
     assert held_against(stated, stated, body, seed=4).agrees is True
+
+
+WIDE = level(8)  # beside it products of values say next to nothing of what moves
+HIDDEN = {
+    "an autoregression that is white noise": [{"white_noise": {"sd": 1.25}}],
+    "a shock 10 % too large": [{"ar": {"phi": 0.6, "sd": 1.1}}],
+    "another φ of the same variance": [{"ar": {"phi": 0.5, "sd": 0.8660254 / 0.8}}],
+}
+
+
+@pytest.mark.parametrize("name", HIDDEN)
+def test_what_moves_about_wide_levels_is_judged_by_its_changes(name):
+    spec = {"procgen": 1, "seed": 3, "paths": 1000, "time": {"steps": 60}}
+    stated = spec | {"series": {"x": [{"constant": WIDE}, *AR]}}
+    found = pg.validate(pg.render(spec | {"series": {"x": [{"constant": WIDE}, *HIDDEN[name]]}}).to_pandas(), stated)
+    gone = [row for row in found.rows if row.outcome == "departs"]
+    assert "variance of changes" in {row.what for row in gone}, found.text()
+    assert min(row.p for row in gone if row.what == "variance of changes") < 1e-12
+    assert pg.validate(pg.render(stated | {"seed": 4}).to_pandas(), stated).agrees is True

@@ -121,6 +121,16 @@ def squares_slope(draw: Draw, n: int, steps: int) -> Findings:
     return findings
 
 
+def changes_of(draw: Draw, n: int, changes: int) -> Findings:
+    """The mean square of so many changes from one number to the next, path by path."""
+
+    def findings(rng: Rng, count: int) -> Iterator[tuple[Finding, int]]:
+        x = np.diff(draw(rng, (changes + 1, count, n)), axis=0)
+        return sample_findings(np.einsum("tcn,tcn->cn", x, x) / changes - 2, None)
+
+    return findings
+
+
 def start_of(draw: Draw, n: int) -> Findings:
     """The sizes of two first values less those of two last ones, path by path."""
 
@@ -341,6 +351,8 @@ CASES = (
     Case("slope of squares, 200 paths of 20 steps, Laplace", 100_000, squares_slope(laplace, 200, 20), 4000),
     Case("slope of squares, 2,000 paths of 20 steps, Laplace", 10_000, squares_slope(laplace, 2000, 20), 40_000),
     Case("slope of squares, 500 paths of 200 steps, Laplace", 5_000, squares_slope(laplace, 500, 200), 100_000),
+    Case("variance of changes, 200 paths of 12, Laplace", 200_000, changes_of(laplace, 200, 12), 2600),
+    Case("variance of changes, 1,000 paths of 60, normal", 20_000, changes_of(normal, 1000, 60), 61_000),
     Case("size of the start, 100 of t(4)", 2_000_000, start_of(student(4), 100), 400),
     Case("size of the start, 2,000 of t(4)", 100_000, start_of(student(4), 2000), 8000),
     Case("size of the start, 100 lognormals (σ 1)", 2_000_000, start_of(lognormal(1.0), 100), 400),
