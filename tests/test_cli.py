@@ -8,7 +8,6 @@ import shutil
 import signal
 import subprocess
 import sys
-import time
 from importlib import metadata
 from pathlib import Path
 
@@ -21,6 +20,7 @@ from typer.testing import CliRunner
 
 import procgen as pg
 from procgen.app import app
+from tests.waiting import wait_for
 
 ROOT = Path(__file__).parent.parent
 PUMP = str(ROOT / "specs" / "pump-flow.yaml")
@@ -439,15 +439,31 @@ def test_a_full_disk_leaves_nothing_that_looks_whole_and_resume_goes_on(tmp_path
     assert pg.open_ensemble(out).digest == pg.render(pg.load(PUMP)).digest
 
 
+# The command, each process of which draws one part and then stands still until it was struck: it cannot end before.
+STANDING = """
+import pathlib, sys, time
+from procgen.ensemble import part
+
+drawn, struck, done = part._render_part, pathlib.Path(sys.argv.pop(1)), []
+
+def first_only(*task):
+    while done and not struck.exists():
+        time.sleep(0.01)
+    done.append(drawn(*task))
+    return done[-1]
+
+part._render_part = first_only
+import procgen.__main__
+"""
+
+
 def test_ctrl_c_ends_with_130_and_resume_gives_the_same_values(tmp_path):
     out, size = tmp_path / "out", ["--paths", "40000", "--workers", "2"]  # four parts, two at a time
-    process = subprocess.Popen(
-        [*COMMAND, "render", PUMP, "-o", str(out), *size], stderr=subprocess.PIPE, text=True, start_new_session=True
-    )
-    until = time.monotonic() + 60
-    while not list(out.glob("*.parquet")) and time.monotonic() < until and process.poll() is None:
-        time.sleep(0.005)
+    command = [sys.executable, "-c", STANDING, str(tmp_path / "struck"), "render", PUMP, "-o", str(out), *size]
+    process = subprocess.Popen(command, stderr=subprocess.PIPE, text=True, start_new_session=True)
+    wait_for("the first part", lambda: list(out.glob("*.parquet")) or process.poll() is not None)
     os.killpg(process.pid, signal.SIGINT)  # as a terminal does: to every process of the group
+    (tmp_path / "struck").touch()
     _, err = process.communicate(timeout=60)
     assert process.returncode == 130, err
     assert err.splitlines() == ["procgen: stopped; what was finished is kept, and render goes on with --resume"]

@@ -39,10 +39,12 @@ class Jumps:
         atoms: the value without shock and jumps, which has a chance of its own (none beside a shock).
         """
         lumps = [part for part in self.parts if part[2] == 0.0]
-        rest = Normals(tuple(part for part in self.parts if part[2] > 0.0)).distribution()
+        spread = [part for part in self.parts if part[2] > 0.0] or [(0.0, self.shift, 1.0)]
+        share = sum(part[0] for part in spread)
+        rest = Normals(tuple((p / (share or 1.0), mean, sd) for p, mean, sd in spread)).distribution()
         shift, variance = self.shift, self.spread**2 + self.rate * (self.mean**2 + self.sd**2)
         level = self.shift + self.rate * self.mean
-        mean, var, far = level, variance, 60.0 * np.sqrt(variance)
+        mean, var = level, variance
         if start:
             once = np.expm1(self.mean + self.sd**2 / 2)
             twice = np.expm1(2 * self.mean + 2 * self.sd**2)
@@ -62,27 +64,22 @@ class Jumps:
 
             def cdf(self, x):
                 y = self._inner(x)
-                return rest.cdf(y) + self.lump * (y >= shift)
+                return share * rest.cdf(y) + self.lump * (y >= shift)
 
             def sf(self, x):
                 y = self._inner(x)
-                return rest.sf(y) + self.lump * (y < shift)
+                return share * rest.sf(y) + self.lump * (y < shift)
 
             def pdf(self, x):
-                return rest.pdf(self._inner(x)) / (np.asarray(x, float) if start else 1.0)
+                return share * rest.pdf(self._inner(x)) / (np.asarray(x, float) if start else 1.0)
 
             def ppf(self, p):
                 p = np.asarray(p, float)
-                low, high = (np.full(p.shape, level + side * far) for side in (-1.0, 1.0))
-                for _ in range(200):
-                    middle = (low + high) / 2.0
-                    enough = rest.cdf(middle) + self.lump * (middle >= shift) >= p
-                    low, high = np.where(enough, low, middle), np.where(enough, middle, high)
-                    if np.all(high - low <= 1e-13 * np.maximum(np.abs(high), 1e-3 * far)):
-                        break
-                upto = rest.cdf(shift)
-                high = np.where((p > upto) & (p <= upto + self.lump), shift, high)
-                y = np.where(p <= 0.0, -np.inf, np.where(p >= 1.0, np.inf, high))
+                upto = share * rest.cdf(shift)
+                with np.errstate(divide="ignore", invalid="ignore"):
+                    below, beyond = rest.ppf(p / share), rest.isf((1.0 - p) / share)
+                y = np.where(p <= upto, below, np.where(p > upto + self.lump, beyond, shift))
+                y = np.where(p <= 0.0, -np.inf, np.where(p >= 1.0, np.inf, y))
                 return start * np.exp(y) if start else y
 
             def isf(self, p):

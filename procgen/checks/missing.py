@@ -79,7 +79,8 @@ def adapted(plan: Any, gaps: dict[str, Any]) -> Any:
         elif any(isinstance(way.kalman, GapKalman) for way in ways) and plan.shock_pairs[names] != Expected():
             unknown = f"{_WHY}: what prediction errors beside them have in common is not computed"
             plan.shock_pairs[names] = Expected(unknown=unknown)
-    return replace(plan, gaps=gaps)  # made anew, as what is summed follows from what is judged
+    plan.gaps = gaps
+    return replace(plan)  # made anew: what is summed up follows from what has an exact law, of which there is less
 
 
 def through(way: Route | Cannot) -> Route | Cannot:

@@ -74,8 +74,11 @@ class Run:
             self._begin()
         if self.graph.pace > 1:
             return math.inf
-        terms = [node.term for node in self._order if isinstance(node, Node)]
-        return sum([0 if isinstance(term, Hidden) else term.early() for term in terms])
+        steps = 0.0
+        for node in self._order:
+            if isinstance(node, Node) and not isinstance(node.term, Hidden):
+                steps += node.term.early()
+        return steps
 
     def restore(self, step: int, state: dict[str, Array]) -> None:
         """Go on from a state that `state()` gave after step `step` − 1 of the same paths."""

@@ -18,6 +18,7 @@ FELT = 1e-8  # weight of a node from which on its step counts
 FINE = 0.8  # most steps between nodes in standard deviations of the law: the rule errs by exp(-2 pi² / FINE²), 4e-14
 MOST = 2_000  # nodes: a cdf over what is wider is off by some 6e-5
 AT_ONCE = 1 << 19  # chances
+MARKS = 512
 FARTHEST = 2.0**52  # whole numbers are no longer exact beyond
 ROUNDING = 1e-12
 LARGEST = 0.1 / ROUNDING  # mean about which whole numbers are still told apart
@@ -153,17 +154,29 @@ class Compound:
         p = np.asarray(p, float)
         if self._top * len(self.weights) <= LISTED:
             return np.searchsorted(self._tables[0], p).astype(float)
-        return self._first(lambda k: self.cdf(k) >= p, p.shape)
+        marks, below, _ = self._marks
+        return self._first(lambda k: self.cdf(k) >= p, marks, np.searchsorted(below, p))
 
     def isf(self, p):
         p = np.asarray(p, float)
         if self._top * len(self.weights) <= LISTED:
             return np.searchsorted(self._tables[1], -p).astype(float)
-        return self._first(lambda k: self.sf(k) <= p, p.shape)
+        marks, _, beyond = self._marks
+        return self._first(lambda k: self.sf(k) <= p, marks, np.searchsorted(beyond, -p))
 
-    def _first(self, enough: Callable[[np.ndarray], np.ndarray], shape: tuple[int, ...]) -> np.ndarray:
-        """The least count of which `enough` is true, by halving; what lies beyond the last is put there."""
-        below, reached = np.full(shape, -1.0), np.full(shape, self._top)
+    @cached_property
+    def _marks(self) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+        """Some counts up to the last, each a few in a hundred above the one before, with the areas to both sides."""
+        marks = np.unique(np.floor(np.geomspace(1.0, self._top, MARKS)))
+        return marks, self.cdf(marks), -self.sf(marks)
+
+    def _first(self, enough: Callable[[np.ndarray], np.ndarray], marks: np.ndarray, at: np.ndarray) -> np.ndarray:
+        """The least count of which `enough` is true, by halving between the marks before and at `at`.
+
+        What lies beyond the last is put there.
+        """
+        below = np.concatenate([[-1.0], marks])[at]
+        reached = np.concatenate([marks, [self._top]])[at]
         while np.any(reached - below > 1.0):
             middle = np.floor(0.5 * (below + reached))
             true = enough(middle)

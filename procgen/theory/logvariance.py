@@ -29,6 +29,7 @@ HALVINGS = 48
 NEGLIGIBLE_RATE = 1e-13  # K(q) below it is q E g but for q^2
 LARGEST_EXPONENT = 600.0
 NEGLIGIBLE = 1e-18
+ADDED_AT_ONCE = 1 << 12  # values of K
 FAR = 37.0  # standard deviations of a normal: the area beyond is 1e-299
 PANELS = 256
 MOST_STEPS = 256
@@ -199,13 +200,18 @@ class Egarch(LogVariance):
         return np.log1p(q * level + q * q * bent(q))
 
     def cumulants(self, q):
-        q, left, total = np.asarray(q, float), 1.0, np.zeros(np.shape(q))
+        q, left = np.asarray(q, float), 1.0
+        total, rows = np.zeros(q.shape), int(np.clip(ADDED_AT_ONCE // max(q.size, 1), 1, 256))
         while True:
-            added = self._log_mean(q * left)
-            total = total + added
-            left *= self.beta
-            if np.abs(added).max(initial=0.0) * left <= NEGLIGIBLE * (1.0 - self.beta):
+            powers = np.multiply.accumulate(np.concatenate([[left], np.full(rows, self.beta)]))
+            added = self._log_mean(q * powers[:-1].reshape(-1, *np.ones(q.ndim, int)))
+            largest = np.abs(added).reshape(rows, -1).max(axis=1, initial=0.0)
+            last = np.flatnonzero(largest * powers[1:] <= NEGLIGIBLE * (1.0 - self.beta))
+            for one in added[: last[0] + 1 if len(last) else rows]:  # from the first on, whatever stands beside q
+                total = total + one
+            if len(last):
                 return total
+            left = float(powers[-1])
 
     def tilt(self, q):
         _, tilted, _ = self._series

@@ -138,9 +138,15 @@ class Lumped(MixedLaw):
         found = [w * chance_of(law, x) for w, law in zip(self.weights, self.laws, strict=True)]
         return np.sum(found, axis=0)
 
-    def ppf(self, p: Any) -> NDArray:
-        p = np.asarray(p, float)
-        return on_atoms(self, p, super().ppf(p))
+    def _ends(self, p: NDArray) -> tuple[NDArray, NDArray]:
+        """Between two values with a chance of their own, or on one."""
+        low, high = super()._ends(p)
+        for value in self.atoms:
+            upto = float(self.cdf(value))
+            beyond, below = p > upto, p <= upto - float(self.chance(value))
+            low = np.where(below, low, np.where(beyond, np.maximum(low, value), value))
+            high = np.where(beyond, high, np.where(below, np.minimum(high, value), value))
+        return low, high
 
 
 def parts_of(law: Any) -> list[tuple[float, Any]]:

@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from procgen.chance.laws.mixture import halved
+from procgen.chance.laws.mixture import crossed, halved
 
 
 class MixedLaw:
@@ -41,18 +41,22 @@ class MixedLaw:
         return self._sum("sf", x)
 
     def ppf(self, p: Any) -> NDArray:
-        """Quantiles, by halving between those of the parts; each side by its own area, which has all its digits."""
+        """Quantiles, between those of the parts; each side by its own area, which has all its digits."""
         p = np.asarray(p, float)
         low, high = self._ends(p)
-        found = np.empty(p.shape)
-        below = p < 0.5
+        found, below = np.empty(p.shape), p < 0.5
         if below.any():
-            area = p[below]
-            found[below] = halved(lambda x: self.cdf(x) < area, low[below], high[below])
+            found[below] = self._found(self.cdf, 1.0, p[below], low[below], high[below])
         if not below.all():
-            rest = 1.0 - p[~below]
-            found[~below] = halved(lambda x: self.sf(x) > rest, low[~below], high[~below])
+            found[~below] = self._found(self.sf, -1.0, 1.0 - p[~below], low[~below], high[~below])
         return found[()]
+
+    def _found(self, beyond: Any, sign: float, area: NDArray, low: NDArray, high: NDArray) -> NDArray:
+        """Where an area that rises with the sign of x is `area`; the upper end of a jump over it."""
+        if self.spacing:  # all jumps: nothing to be read from the shape
+            return halved(lambda x: beyond(x) < area if sign > 0 else beyond(x) > area, low, high)
+        unit = sign * np.where(area > 0.0, area, 1.0)
+        return crossed(lambda x: (beyond(x) - area) / unit, low, high)
 
     def _ends(self, p: NDArray) -> tuple[NDArray, NDArray]:
         parts = np.array([law.ppf(p) for law in self.laws])

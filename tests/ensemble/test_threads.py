@@ -15,7 +15,7 @@ from procgen.terms.given import spec_of
 from procgen.terms.graph import build
 from procgen.terms.hands import at_hand, behind, each, hands
 from procgen.terms.run import strands
-from tests.golden_specs import small
+from tests.golden_specs import NAMES, one_small
 
 
 @pytest.fixture
@@ -30,8 +30,9 @@ def many_threads(monkeypatch):
     sys.setswitchinterval(before)
 
 
-@pytest.mark.parametrize("name, spec", [pytest.param(*each, id=each[0]) for each in small(paths=100)])
-def test_five_threads_draw_what_one_draws(name, spec, many_threads):
+@pytest.mark.parametrize("name", NAMES)
+def test_five_threads_draw_what_one_draws(name, many_threads):
+    spec = one_small(name, paths=100)
     one = pg.render(spec, workers=1).digest
     for compiled in (False, kernel.available()):
         with kernel.compiling(compiled):
@@ -50,8 +51,9 @@ def few_at_once(monkeypatch):
     sys.setswitchinterval(before)
 
 
-@pytest.mark.parametrize("name, spec", [pytest.param(*each, id=each[0]) for each in small(paths=20)])
-def test_the_series_of_a_chain_shared_among_threads_have_the_same_values(name, spec, few_at_once, tmp_path):
+@pytest.mark.parametrize("name", NAMES)
+def test_the_series_of_a_chain_shared_among_threads_have_the_same_values(name, few_at_once, tmp_path):
+    spec = one_small(name, paths=20)
     one = pg.render(spec, workers=1).digest
     for compiled in (False, kernel.available()):
         with kernel.compiling(compiled):

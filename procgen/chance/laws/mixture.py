@@ -20,6 +20,8 @@ from procgen.spec.declare import Parameter, Real
 _FURTHEST = 13.0  # standard deviations: the normal area beyond is 6e-39
 _MARKS = (-12, -8, -6, -4, -2, 0, 2, 4, 6, 8, 12)
 _HALVINGS = 200
+_ROUNDING = 2.0**-50  # of an area that is added up, in units of its own
+_NEAR = 2.0**-40  # of a value
 
 
 @dataclass(frozen=True)
@@ -137,14 +139,14 @@ class Normals:
                 return sum(w * ndtr((mean - x) / sd) for w, mean, sd in parts)
 
             def _ppf(self, p):
-                ends = _ends(ndtri(p))
-                low = halved(lambda x: self._cdf(x) < p, *ends)
-                return np.where(p < 0.5, low, halved(lambda x: self._sf(x) > 1.0 - p, *ends))
+                return self._found(p, 1.0 - p, *_ends(ndtri(p)))
 
             def _isf(self, p):
-                ends = _ends(-ndtri(p))
-                high = halved(lambda x: self._sf(x) > p, *ends)
-                return np.where(p < 0.5, high, halved(lambda x: self._cdf(x) < 1.0 - p, *ends))
+                return self._found(1.0 - p, p, *_ends(-ndtri(p)))
+
+            def _found(self, p, rest, low, high):
+                lower, unit = p < 0.5, np.minimum(p, rest)
+                return crossed(lambda x: np.where(lower, self._cdf(x) - p, rest - self._sf(x)) / unit, low, high)
 
             def _munp(self, n):
                 return moment(int(n))
@@ -165,3 +167,41 @@ def halved(beyond: Callable[[np.ndarray], np.ndarray], low: np.ndarray, high: np
         further = beyond(middle)
         low, high = np.where(further, middle, low), np.where(further, high, middle)
     return 0.5 * (low + high)
+
+
+def crossed(f: Callable[[np.ndarray], np.ndarray], low: np.ndarray, high: np.ndarray) -> np.ndarray:
+    """Where f, which rises, comes to 0 between two arrays of ends; an end where it is beyond.
+
+    By Chandrupatla (1997, Advances in Engineering Software 28, 145-149): through three points where they lie well, else
+    by halving. Found is what f makes of is 0 but for rounding, which is taken to be that of areas in units of their
+    own; where f is level there, its level begins at what is found.
+    """
+    low, high = np.broadcast_arrays(np.asarray(low, float), np.asarray(high, float))
+    with np.errstate(all="ignore"):  # what comes of equal values is not used
+        x1, x2, f1, f2 = high, low, f(high), f(low)
+        found = np.where(f2 >= 0.0, low, np.where(f1 < 0.0, high, 0.5 * (low + high)))  # the last of infinite ends
+        left = (f2 < 0.0) & (f1 >= 0.0) & np.isfinite(low) & np.isfinite(high)
+        t = np.full(low.shape, 0.5)
+        for _ in range(_HALVINGS):
+            if not left.any():
+                break
+            x = np.where(left, x1 + t * (x2 - x1), x1)
+            fx = f(x)
+            same = (fx < 0.0) == (f1 < 0.0)
+            x3, f3 = np.where(same, x1, x2), np.where(same, f1, f2)
+            x2, f2 = np.where(same, x2, x1), np.where(same, f2, f1)
+            x1, f1 = x, fx
+            nearer = np.abs(f1) < np.abs(f2)
+            best, rest = np.where(nearer, x1, x2), np.where(nearer, f1, f2)
+            least = 2.0**-53 * np.abs(best) / np.abs(x2 - x1)
+            found = np.where(left, best, found)
+            left = left & (np.abs(rest) > _ROUNDING) & (least <= 0.25)
+            xi, phi = (x1 - x2) / (x3 - x2), (f1 - f2) / (f3 - f2)
+            t = f1 / (f2 - f1) * f3 / (f2 - f3) + (x3 - x1) / (x2 - x1) * f1 / (f3 - f1) * f2 / (f3 - f2)
+            t = np.where((phi * phi < xi) & ((1.0 - phi) * (1.0 - phi) < 1.0 - xi) & np.isfinite(t), t, 0.5)
+            t = np.minimum(np.maximum(t, least), 1.0 - least)
+        before = found - 8.0 * _ROUNDING * (x1 - x2) / (f1 - f2) - _NEAR * np.maximum(np.abs(found), high - low)
+        level = (before > low) & (np.abs(f(found)) <= _ROUNDING) & (f(np.maximum(before, low)) >= -_ROUNDING)
+        if level.any():
+            found = np.where(level, halved(lambda x: f(x) < -_ROUNDING, low, found), found)
+    return found
