@@ -99,8 +99,7 @@ class Drawer:
         """The next steps of a run, `part` of a block, into arrays that have the block's steps."""
         step, begin = part.first_step, (block or part).first_step
         compiling, columns = kernel.is_compiling(), self.source.columns
-        most = max(CACHED, TILE // len(columns) if part.paths == 1 and at_hand() > 1 else 0) if compiling else TILE
-        for steps in tiles(part.steps, part.paths, len(columns), most):
+        for steps in tiles(part.steps, part.paths, len(columns), CACHED if compiling else TILE):
             with np.errstate(all="ignore"):  # what is not finite is refused below, with its place
                 tile = run.tile(steps)
             turning = [partial(turn, tile[column.name], out[column.name], step - begin) for column in columns]
