@@ -110,6 +110,7 @@ SETTINGS = (
         constants={
             "procgen.chance.blocks.BLOCK": 61,
             "procgen.terms.burnt.BURN_TILE": 3,
+            "procgen.terms.conditional.BURN_LEAST": 3,
             "procgen.terms.run.LARGEST": 61,
             "procgen.ensemble.columns.AT_ONCE": 61,
         },
