@@ -17,6 +17,7 @@ Compiled, to the same bits:
 
 - `kernel`: recursions written once, run as they stand or compiled; `abreast` puts all paths of a step side by side.
 - `machine`: compiled functions kept as machine code; `passing` and `compiled_passing`: how arguments reach it.
+- `filters`, with `compiled_filter`: recursions of many coefficients, in strips of paths.
 - `compiled`, `compiled_normal`, `compiled_elementary`, `compiled_inversion`, `compiled_counts`: the files of those
   names once more, for the compiler; imported only where there is no machine code yet.
 """

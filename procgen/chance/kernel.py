@@ -72,6 +72,7 @@ class Kernel:
     def __init__(self, function: Callable[..., Any]) -> None:
         update_wrapper(self, function)
         self.plain = function
+        self._of_many: Callable[..., Any] | None = None
 
     def __call__(self, *args: Any) -> Any:
         if not _compiling.get():
@@ -91,12 +92,18 @@ class Kernel:
         subscripted, by_step = self._text.subscripted, self._text.by_step
         kinds = tuple(kind_of(a, n in subscripted, n in by_step, lanes) for n, a in zip(names, args, strict=True))
         run = self._abreast(kinds)
+        if run is None and self._of_many is not None:
+            return self._of_many(*args)
         if run is None:
             return self.compiled(*args) if lanes <= _FEW else self.plain(*args)
         rows = [np.empty(lanes) for _ in range(self._text.returns)]
         kept = [np.empty(lanes) for name in names if name in self._text.moved]
         run(lanes, *map(passed, args, kinds), *kept, *rows)
         return _as_returned(rows)
+
+    def of_many(self, function: Callable[..., Any]) -> None:
+        """Have a function give the same values abreast where there are many coefficients, and none is written in."""
+        self._of_many = function
 
     @property
     def carries(self) -> list[bool]:

@@ -4,6 +4,9 @@ from __future__ import annotations
 
 import numpy as np
 
+from procgen.chance.kernel import is_compiling, machine
+
+_LARGE, _STRIP = 64, 32  # size from which on a compiled product repays; columns of a strip of `compiled_filter`
 _ROUNDING = 2.0**-50
 _DOUBLINGS = 64
 
@@ -13,10 +16,20 @@ def matmul(a: np.ndarray, b: np.ndarray) -> np.ndarray:
     a, b = np.asarray(a, np.float64), np.asarray(b, np.float64)
     if a.shape[-1] != b.shape[-2]:
         raise ValueError(f"expected inner sizes to agree, got shapes {a.shape} and {b.shape}")
+    if a.ndim == b.ndim == 2 and min(*a.shape, *b.shape) >= _LARGE and is_compiling():
+        return _product(np.ascontiguousarray(a), np.ascontiguousarray(b))
     total = np.zeros((*np.broadcast_shapes(a.shape[:-2], b.shape[:-2]), a.shape[-2], b.shape[-1]))
     for k in range(a.shape[-1]):
         total += a[..., :, k, None] * b[..., None, k, :]
     return total
+
+
+def _product(a: np.ndarray, b: np.ndarray) -> np.ndarray:
+    """The same bits, compiled."""
+    count, out = len(b), np.empty((len(a), b.shape[1]))
+    back, rows = np.arange(count, 0, -1), np.zeros(_STRIP * (count + 1))
+    machine("compiled_filter", "product")(a, b, out, back, rows, np.empty(_STRIP))
+    return out
 
 
 def cholesky(s: np.ndarray) -> np.ndarray:

@@ -7,6 +7,7 @@ from typing import ClassVar
 
 import numpy as np
 
+from procgen.chance.filters import fill_shocks, fill_values
 from procgen.chance.kernel import kernel
 from procgen.spec.declare import Parameter, Reals, Record
 from procgen.terms.base import LAW, SD, TOTAL_SD, Ahead, Term, Unknown, number, rows, signed, stated, without_gap
@@ -73,6 +74,10 @@ def inversion(phi, theta, x, a):
             if theta[j] != 0.0:
                 v = v - theta[j] * a[t + q - 1 - j]
         a[t + q] = v
+
+
+recursion.of_many(fill_values)
+inversion.of_many(fill_shocks)
 
 
 class Arma(Term):
