@@ -146,8 +146,8 @@ class EnsembleOrigin:
             for record in records:
                 nodes.update(record["nodes"])
                 self.faults += [Check.fact("", "rows in order", where, what) for where, what in record["faults"]]
-                for first, end, facts, arrays in record["sums"]:
-                    tree.add(first, end, unpacked(plan, facts, arrays))
+                for first, end, sums in record["sums"]:
+                    tree.add(first, end, unpacked(plan, sums))
 
         if workers is None and scheduler is None:
             workers = default_workers(self.rows * len(self.columns), WORTH)
