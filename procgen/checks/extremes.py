@@ -39,7 +39,7 @@ class Reach:
     """Mean and standard deviation of every step of a series, and the chance of a value so far away."""
 
     def __init__(self, theory: Any, grain: float, steps: int = _CHUNK, n: int = 0):
-        self.theory, self.grain, self.size, self.n = theory, grain, min(steps, _CHUNK), n
+        self.theory, self.grain, self.steps, self.size, self.n = theory, grain, steps, min(steps, _CHUNK), n
         self._chunks: dict[int, tuple[NDArray, NDArray]] = {}
         self._kurtosis: dict[int, float | None] = {}
 
@@ -115,10 +115,10 @@ class Reach:
     def _chunk(self, k: int) -> tuple[NDArray, NDArray]:
         k = 0 if k and self.theory.stationarity.stationary else k  # then all are the same
         if k not in self._chunks:
-            steps = np.arange(k * self.size, (k + 1) * self.size)
+            steps = np.arange(k * self.size, min((k + 1) * self.size, self.steps))
             mean, variance = self.theory.mean(steps), self.theory.variance(steps)
             if mean is None or variance is None:
-                mean = variance = np.full(self.size, np.nan)
+                mean = variance = np.full(len(steps), np.nan)
             while len(self._chunks) > 3:
                 self._chunks.pop(next(iter(self._chunks)))
             usable = np.isfinite(variance) & (variance > 0.0)

@@ -12,7 +12,7 @@ from procgen.theory.arma import WEAK, CrossCovariance, cross_covariance
 from procgen.theory.linear import At, Base, Linear, Season, Sum, base_of
 from procgen.theory.running import mixed
 from procgen.theory.sources import PROCESS, Space
-from procgen.theory.system import LARGEST_STATE, state_size, system_of
+from procgen.theory.system import LARGEST_STATE, System, state_size, system_of
 from procgen.theory.unknown import Unknown
 from procgen.theory.weights import covariance_by_weights
 
@@ -21,6 +21,7 @@ CANCELLED = 1e4  # a sum smaller than its parts by this much has lost digits tha
 NOTHING_LEFT = 1e11  # and by this much, all of them
 Of = Callable[[np.ndarray], np.ndarray]
 Delays = tuple[Base, dict[int, float]]
+KEPT = 1_000_000  # elements of the transitions of all state spaces that are kept
 DIRECT = 10**8  # up to so many products a convolution is added up as such
 
 
@@ -49,11 +50,21 @@ def _joint(space: Space, x: Linear, y: Linear, t: np.ndarray, s: np.ndarray) -> 
     forms = (x,) if x == y else (x, y)
     if state_size(forms) > LARGEST_STATE:
         return covariance_by_weights(space, x, y, t, s)
-    if forms not in space.last:  # many questions in a row are of one series; its powers may be large
-        space.last.clear()
-        space.last[forms] = system_of(space, forms)
-    flat = space.last[forms].covariance(0, len(forms) - 1, t.ravel(), s.ravel())
-    return flat.reshape(t.shape)
+    return _system(space, forms).covariance(0, len(forms) - 1, t.ravel(), s.ravel()).reshape(t.shape)
+
+
+def _system(space: Space, forms: tuple[Linear, ...]) -> System:
+    """The state space of some forms, kept with those asked before it as long as they are not large together."""
+    if space.last != forms:  # many questions in a row are of one series; only its powers are kept
+        for system in space.systems.values():
+            system.rest()
+        space.last = forms
+    if forms not in space.systems:
+        made = system_of(space, forms)
+        while space.systems and sum(len(each.transition) ** 2 for each in (made, *space.systems.values())) > KEPT:
+            del space.systems[next(iter(space.systems))]
+        space.systems[forms] = made
+    return space.systems[forms]
 
 
 def condition(form: Linear) -> float:

@@ -76,7 +76,8 @@ class Space:
     bounded: bool = False  # whether all its values lie between two numbers
     sources: dict[str, Source] = field(default_factory=dict)
     origins: dict[Any, str] = field(default_factory=dict)  # where a running sum was written, by its key
-    last: dict[Any, Any] = field(default_factory=dict)  # the state space that was asked last, by its forms
+    systems: dict[Any, Any] = field(default_factory=dict)  # state spaces that were asked, by their forms
+    last: Any = None  # the forms that were asked last
     sums: dict[Any, Any] = field(default_factory=dict)  # covariances of running sums, see `running`
     ties: Mapping[frozenset[str], Tie] = field(default_factory=dict)  # of those that are not jointly normal
 

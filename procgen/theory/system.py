@@ -27,6 +27,8 @@ LONGEST_RESPONSE = 50_000_000  # numbers in a table of responses
 LONGEST_STILL = 64  # steps from 0 on that are looked at for values that are certain
 CANCELS = 1e-14  # of the sizes of what is added up: what is left of it is rounding
 LONGEST_MARCH = 500_000  # steps taken one by one while the variance of a source changes
+AT_ONCE = 4096  # responses that are in memory together
+LONGEST_KEPT = 1 << 20  # steps of a covariance that are kept for the next question
 
 Distinct = tuple[np.ndarray, np.ndarray]
 
@@ -48,6 +50,7 @@ class System:
     settles: float = 0.0
     _table: list[tuple[np.ndarray, np.ndarray]] = field(default_factory=list, repr=False)
     _still: dict[int, np.ndarray] = field(default_factory=dict, repr=False)
+    _along: dict[tuple[int, int, int], _Along] = field(default_factory=dict, repr=False)
 
     def covariance(self, i: int, j: int, t: np.ndarray, s: np.ndarray) -> np.ndarray:
         """Cov(y_i(t), y_j(s)) for one-dimensional int64 arrays of steps >= 0."""
@@ -90,9 +93,16 @@ class System:
         size, longest = len(self.transition), int(at[0][-1] + gap_at[0][-1]) + 1
         marching = len(at[0]) * (4 * size**3 + OVERHEAD)
         responding = longest * 2 * size**2 + len(gap_at[0]) * (longest * (size + len(self.noise)) + OVERHEAD)
+        kept = self._along.get((late, early, int(gap_at[0][0]))) if len(gap_at[0]) == 1 else None
+        if kept is not None and at[0][-1] < len(kept.known):
+            return kept.known[steps]
         if self.noise_path is None and responding < marching and longest * size <= LONGEST_RESPONSE:
             return self._by_responses(late, early, steps, gap_at)
         return self._by_marching(late, early, at, gap_at)
+
+    def rest(self) -> None:
+        """Give back the memory of powers, which are made again where they are wanted."""
+        self._table.clear()
 
     def _by_marching(self, late: int, early: int, at: Distinct, gap_at: Distinct) -> np.ndarray:
         rows = self._rows(self.observation[late], gap_at[0])
@@ -156,6 +166,11 @@ class System:
     def _by_responses(self, late: int, early: int, steps: np.ndarray, gap_at: Distinct) -> np.ndarray:
         """Squares of responses added up: all steps of a gap at once."""
         gaps, which = gap_at
+        if len(gaps) == 1 and int(steps.max()) < LONGEST_KEPT:
+            key = (late, early, int(gaps[0]))
+            if key not in self._along:
+                self._along[key] = _Along(self, *key)
+            return self._along[key].upto(int(steps.max()) + 1)[steps]
         last = int(steps.max()) + 1
         ahead = self._responses(self.observation[late], last + int(gaps[-1]))
         behind = self._responses(self.observation[early], last)
@@ -168,6 +183,32 @@ class System:
             gathered = np.concatenate([[0.0], np.cumsum(products)])[steps[chosen]]
             out[chosen] = gathered + np.einsum("ti,ti->t", kept[gap + steps[chosen]], behind[steps[chosen]])
         return out
+
+
+class _Along:
+    """Cov(y_late(t + gap), y_early(t)) for t = 0, 1, 2 …, as far as it has been asked for: squares of responses."""
+
+    def __init__(self, system: System, late: int, early: int, gap: int):
+        self.system, self.gathered, self.known = system, 0.0, np.empty(0)
+        self.ahead = system._rows(system.observation[late], np.array([gap]))[0]  # row A^(gap + t), and
+        self.behind = system.observation[early]  # row A^t, of the next step
+
+    def upto(self, count: int) -> np.ndarray:
+        """At least so many steps."""
+        found = [self.known]
+        for begin in range(len(self.known), count, AT_ONCE):
+            found.append(self._next(min(AT_ONCE, count - begin)))
+        self.known = np.concatenate(found) if len(found) > 1 else self.known
+        return self.known
+
+    def _next(self, count: int) -> np.ndarray:
+        system = self.system
+        ahead, behind = (system._responses(row, count + 1) for row in (self.ahead, self.behind))
+        self.ahead, self.behind, ahead, behind = ahead[-1], behind[-1], ahead[:-1], behind[:-1]
+        shocks = np.einsum("tm,tm->t", ahead @ system.loading @ system.noise, behind @ system.loading)
+        sums = np.cumsum(np.concatenate([[self.gathered], shocks]))
+        self.gathered = float(sums[-1])
+        return sums[:-1] + np.einsum("ti,ti->t", ahead @ system.initial, behind)
 
 
 def _distinct(values: np.ndarray) -> Distinct:
