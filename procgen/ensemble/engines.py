@@ -21,13 +21,13 @@ import sys
 import threading
 from collections import deque
 from collections.abc import Callable, Iterator, Mapping, Sequence
-from dataclasses import dataclass
 from types import FrameType
 from typing import Any, Protocol, TextIO
 
 from procgen.ensemble import forked
 from procgen.ensemble.errors import EnsembleError, lacks_memory, system_sentence
 from procgen.ensemble.own import settled
+from procgen.spec.records import dataclass
 
 Progress = Callable[[int, int], None]  # (rows done so far, rows in all)
 Records = list[dict[str, Any]]

@@ -12,13 +12,13 @@ Everything here makes values: only portable operations (see `procgen.chance.port
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Sequence
-from dataclasses import dataclass
 from functools import cached_property
 from typing import Any
 
 import numpy as np
 
 from procgen.chance.portable import cholesky, matmul
+from procgen.spec.records import dataclass
 from procgen.terms.rows import Unlike, plain, row_in
 
 Array = np.ndarray
