@@ -4,7 +4,7 @@ The way through it: `validate` takes the data (`source`) and the spec; `planning
 goes through the values and leaves sums (`gather`); `judgement` makes checks of these; `verdict` weighs them together.
 
 - Data. Ensembles of ours: `parts` (one task a range of paths), `rectangles`, `parameters`. Anyone's tables:
-  `foreign`, `files`, `roles` (which column is what), `reshaped`, `clock`, `sizes`.
+  `foreign`, `files`, `roles` (which column is what), `reshaped`, `clock`, `late` (beginning later), `sizes`.
 - Plan. Where theory and data are compared: `probes`, `pools` (averages along paths), `relations` (combinations of
   series). What is known of the values: `atoms`, `smooth`, `support`, `rounding`, `missing`. How shocks are recovered:
   `recover`, `undo` (numbers by path), `kalman` and `small` (sums), `few` (few values), `short` (few steps), `spans`

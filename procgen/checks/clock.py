@@ -4,12 +4,14 @@ from __future__ import annotations
 
 import re
 import warnings
+from collections.abc import Callable
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from procgen.checks.words import many
+from procgen.spec.words import row_told
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -37,13 +39,14 @@ class NoTime(ClockError):
 class Times:
     """A column of times as microseconds UTC; `local` (or None) are those of times without a zone, taken as the spec's.
 
-    Raises ClockError where one is no time (NoTime), or its day and month cannot be told apart.
+    `told` says where a row of the column is. Raises ClockError where one is no time (NoTime), or its day and month
+    cannot be told apart.
     """
 
-    def __init__(self, column: pd.Series, zone: str | None):
+    def __init__(self, column: pd.Series, zone: str | None, told: Callable[[int], str] = row_told):
         import pandas as pd
 
-        self.column = column
+        self.column, self.told = column, told
         codes, texts = pd.factorize(column, use_na_sentinel=False)  # as many as steps, not as rows
         found = pd.Series(texts)
         if found.dtype == object or pd.api.types.is_string_dtype(found):
@@ -53,7 +56,7 @@ class Times:
             row = int(np.argmax(times.isna().to_numpy()[codes]))
             value = column.iloc[row]
             given = repr(value) if isinstance(value, str) else str(value)
-            raise NoTime(f"{given} in row {row} of {column.name} is no time")
+            raise NoTime(f"{given} in column {column.name}, {told(row)}, is no time")
         naive = times.dt.tz is None
         self.only_dates = naive and bool((times.dt.normalize() == times).all())
         self.utc = _microseconds(times.dt.tz_localize("UTC") if naive else times)[codes]
@@ -72,12 +75,12 @@ class Times:
             day, month = (other, one) if int(other) > 12 else (one, other)
             year = year if len(year) == 4 else f"20{year}"
             raise ClockError(
-                f"{text!r} in row {row} of {self.column.name} may have its day or its month first; write times with "
-                f"the year first (ISO 8601), such as {year}-{int(month):02d}-{int(day):02d}{rest.rstrip()}"
+                f"{text!r} in column {self.column.name}, {self.told(row)}, may have its day or its month first; write "
+                f"times with the year first (ISO 8601), such as {year}-{int(month):02d}-{int(day):02d}{rest.rstrip()}"
             )
 
 
-def refuse_numbers(column: pd.Series) -> None:
+def refuse_numbers(column: pd.Series, told: Callable[[int], str] = row_told) -> None:
     """NoTime for a column of numbers, with what they look like and how to make times of them."""
     if column.dtype.kind not in "iuf" or not len(column):
         return
@@ -92,7 +95,7 @@ def refuse_numbers(column: pd.Series) -> None:
                 f"; it looks like {what}, which would be {at}: convert with pandas.to_datetime(…, {how}) and give "
                 f"validate the DataFrame, or write times as text such as {at}"
             )
-    raise NoTime(f"{first} in row 0 of {column.name} is a number, not a time{looks}")
+    raise NoTime(f"{first} in column {column.name}, {told(0)}, is a number, not a time{looks}")
 
 
 def _times(found: pd.Series) -> pd.Series:
@@ -131,7 +134,7 @@ def steps_on_grid(times: Times, time: Any) -> NDArray[np.int64]:
     if not on.all():
         row = int(np.argmax(~on))
         raise ClockError(
-            f"{times.column.iloc[row]} in row {row} of {times.column.name} is no step of the spec; "
+            f"{times.column.iloc[row]} in column {times.column.name}, {times.told(row)}, is no step of the spec; "
             f"{int((~on).sum()):,} of {many(len(on), 'row')} {'is' if len(on) == 1 else 'are'} off its grid: "
             f"{difference(grid, times, time)}"
         )
@@ -149,8 +152,8 @@ def mismatch(times: Times, step: NDArray[np.int64], time: Any) -> str:
     row, count = int(np.argmax(wrong)), int(np.count_nonzero(wrong))
     are = "is not that of its step" if count == 1 else "are not those of their steps"
     return (
-        f"{many(count, 'time')} of {len(step):,} {are}, the first {times.column.iloc[row]} in row {row}, "
-        f"step {step[row]}: {difference(grid, times, time)}"
+        f"{many(count, 'time')} of {len(step):,} {are}, the first {times.column.iloc[row]} at step {step[row]}, "
+        f"{times.told(row)}: {difference(grid, times, time)}"
     )
 
 

@@ -11,12 +11,15 @@ import gzip
 import hashlib
 import io
 from collections.abc import Callable, Iterator
+from functools import partial
+from itertools import islice
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, BinaryIO, Protocol, TypeVar
 
 import numpy as np
 
 from procgen.spec.pages import Bomb, read_within
+from procgen.spec.words import row_told
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -76,6 +79,21 @@ def read_file(path: Path, choose: Callable[[list[str]], N]) -> tuple[pd.DataFram
         raise TableError(f"{path} cannot be read: {reason}") from None
     book = "; save the sheet as CSV" if suffix in _BOOKS else ""
     raise TableError(f"expected a .csv, .tsv or .parquet file, got {path.name}{book}")
+
+
+def told_by(path: Path) -> Callable[[int], str]:
+    """How the rows of a file, counted from 0, are told to people: by their lines in a text, else by their numbers."""
+    return partial(_line, path) if path.suffix.lower() in _TEXT else row_told
+
+
+def _line(path: Path, row: int) -> str:
+    """The line at which a row of a text ends: line 1 has the column names, and blank lines count."""
+    reader = csv.reader(_lines(path), delimiter=_header(path)[0])
+    try:
+        ends = (reader.line_num for fields in reader if len(fields) > 1 or any(map(str.strip, fields)))
+        return f"line {next(islice(ends, row + 1, None))}"
+    except (csv.Error, StopIteration):  # a field longer than that reader takes
+        return row_told(row)
 
 
 def digest_of(path: Path) -> str:

@@ -14,17 +14,18 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
-from procgen.checks import filled, handled, judge, ordered, sizes
+from procgen.checks import filled, handled, judge, late, ordered, sizes
 from procgen.checks.blocks import GROUP
 from procgen.checks.clock import ClockError, NoTime, Times, mismatch, refuse_numbers, steps_on_grid
-from procgen.checks.files import TableError, digest_of, read_file
+from procgen.checks.files import TableError, digest_of, read_file, told_by
 from procgen.checks.gather import Gather
 from procgen.checks.lane import Progress, in_one_process
-from procgen.checks.reshaped import LONG, Panel, Wide, recognised
+from procgen.checks.reshaped import LONG, Panel, Told, Wide, recognised
 from procgen.checks.roles import Names, listed, option
 from procgen.checks.verdict import Check
 from procgen.checks.words import joined, many
 from procgen.ensemble.plan import Block
+from procgen.spec.words import row_told
 from procgen.terms.varied import Varied
 
 if TYPE_CHECKING:
@@ -49,7 +50,7 @@ BLOCK = 1 << 22  # values of one series that are handed on at once
 def read_table(path: Path, spec: Any, columns: Mapping[str, str] | None) -> Table:
     """The table in a CSV or Parquet file; only the columns that are needed are read."""
     frame, wanted = read_file(path, lambda found: recognised(found, spec, columns, path.name))
-    return Table(*_long(frame, wanted), spec, str(path), digest_of(path))
+    return Table(*_long(frame, wanted, told_by(path)), spec, str(path), digest_of(path))
 
 
 def from_frame(frame: pd.DataFrame, spec: Any, columns: Mapping[str, str] | None) -> Table:
@@ -59,21 +60,24 @@ def from_frame(frame: pd.DataFrame, spec: Any, columns: Mapping[str, str] | None
     if any(name is not None for name in frame.index.names):
         frame = frame.reset_index()
     wanted = recognised([str(c) for c in frame.columns], spec, columns, "the table")
-    return Table(*_long(frame, wanted), spec, "the table")
+    return Table(*_long(frame, wanted, row_told), spec, "the table")
 
 
-def _long(frame: pd.DataFrame, wanted: Names | Panel | Wide) -> tuple[pd.DataFrame, Names]:
-    return (frame, wanted) if isinstance(wanted, Names) else wanted.long(frame)
+def _long(frame: pd.DataFrame, wanted: Names | Panel | Wide, told: Told) -> tuple[pd.DataFrame, Names, Told]:
+    """The frame with a row a path and step, which column is what, and where its rows are in what was given."""
+    return (frame, wanted, told) if isinstance(wanted, Names) else wanted.long(frame, told)
 
 
 class Table:
     """A table put in order: dense arrays, NaN where something is missing, and checks that name it.
 
-    `file_digest` is that of the file it was read from; None where it was in memory.
+    `told` says where a row is; `file_digest` is that of the file it was read from, None where it was in memory.
     """
 
-    def __init__(self, frame: pd.DataFrame, names: Names, spec: Any, where: str, file_digest: str | None = None):
-        self.spec, self.where, self.file_digest = spec, where, file_digest
+    def __init__(
+        self, frame: pd.DataFrame, names: Names, told: Told, spec: Any, where: str, file_digest: str | None = None
+    ):
+        self.spec, self.where, self.told, self.file_digest = spec, where, told, file_digest
         self.columns = {name: name for name in spec.series}
         self.same_draws = False
         self.faults: list[Check] = []
@@ -82,13 +86,16 @@ class Table:
         self._checks: list[Check] = []
         self._assumed: list[str] = []  # what is said in the first line
         self.absent = 0  # rows that are missing; they are NaN in every series
-        path, labels = _codes(frame[names.path]) if names.path else (np.zeros(len(frame), np.int64), ["0"])
+        self._on_clock = False  # whether times tell which steps are there
+        self._in_order = False  # whether nothing does
+        path, labels = _codes(frame[names.path], told) if names.path else (np.zeros(len(frame), np.int64), ["0"])
         self.labels: list[Any] = labels
         step = self._steps(frame, names, path)
         if names.clock is not None:
             self._compare_times(frame[names.clock], step)
-        self._refuse_window(int(step.min()), int(step.max()))
-        self._refuse_cuts(path, step)
+        self._first = int(step.min())
+        late.refuse_unknown(where, self._first, int(step.max()), spec.time.steps, self._on_clock)
+        late.refuse_cuts(where, labels, path, step)
         self.paths, self.steps = len(self.labels), int(step.max()) + 1
         if self.paths * self.steps > 4 * len(frame) + 1_000_000:
             raise TableError(
@@ -98,8 +105,7 @@ class Table:
         self.rows = self.paths * self.steps
         if names.path is None and len(np.unique(step)) < len(step):
             raise TableError(
-                f"{where}: steps repeat, and there is no column path; {listed('path', names.found)}; "
-                f"{option('path')}"
+                f"{where}: steps repeat, and there is no column path; {listed('path', names.found)}; {option('path')}"
             )
         self._checks += sizes.checks(self.paths, self.steps, spec)
         self._assumed += sizes.told(self.paths, self.steps, spec)
@@ -158,6 +164,11 @@ class Table:
 
         no_cluster(scheduler)
         plan = self._plan = plan_of(self.spec, self.steps, self.same_draws, self.paths)
+        if self._first > 0:
+            late.refuse_window(self.where, self._first, self.steps, self.paths, plan.gaps, self._values)
+        if self._in_order:
+            stated = self.paths * self.spec.time.steps
+            late.refuse_closed_up(self.where, stated, len(self._key), self._values, plan.gaps)
         return in_one_process(plan, self.blocks(), Block(0, self.paths, 0, self.steps), progress)
 
     def blocks(self) -> Iterator[tuple[int, int, Mapping[str, np.ndarray]]]:
@@ -186,6 +197,7 @@ class Table:
             where = f"{self.where} has {len(frame):,} rows, no column of paths and none of steps or times"
             mend = f"{listed('path', names.found)}; {option('path')}; {option('step')}"
             raise TableError(f"{where}, where a path has {self.spec.time.steps:,} steps; {mend}")
+        self._in_order = True
         none = f"no column of steps or times: rows of a path are taken in their order; else {option('step')}"
         self._say("step order", none, "reported")
         order = np.argsort(path, kind="stable")
@@ -202,7 +214,7 @@ class Table:
         if bad.any():
             row = int(np.argmax(bad))
             raise TableError(
-                f"{self.where}: expected whole steps in {name}, got {_cell(column, row)} in row {row}; "
+                f"{self.where}: expected whole steps in {name}, got {_cell(column, row)} in {self.told(row)}; "
                 f'{option("step")}, or one of times with --time-col NAME (columns={{"time": NAME}})'
             )
         step = numbers.astype(np.int64)
@@ -219,13 +231,14 @@ class Table:
     def _timed(self, column: pd.Series) -> NDArray[np.int64]:
         try:
             if self.spec.time.start is None:
-                times = Times(column, self.spec.time.zone)
+                times = Times(column, self.spec.time.zone, self.told)
                 return np.unique(times.utc, return_inverse=True)[1].astype(np.int64)
-            refuse_numbers(column)
-            times = Times(column, self.spec.time.zone)
+            refuse_numbers(column, self.told)
+            times = Times(column, self.spec.time.zone, self.told)
+            self._on_clock = True
             return steps_on_grid(times, self.spec.time)
         except NoTime as error:
-            other = f"{option('time')}, or one of whole steps with --step-col NAME (columns={{\"step\": NAME}})"
+            other = f'{option("time")}, or one of whole steps with --step-col NAME (columns={{"step": NAME}})'
             raise TableError(f"{self.where}: {error}; {other}") from None
         except ClockError as error:
             raise TableError(f"{self.where}: {error}") from None
@@ -235,38 +248,12 @@ class Table:
         if self.spec.time.start is None or column.dtype.kind in "iufb":
             return
         try:
-            fault = mismatch(Times(column, self.spec.time.zone), step, self.spec.time)
+            fault = mismatch(Times(column, self.spec.time.zone, self.told), step, self.spec.time)
         except ClockError as error:
             self._say("times", f"they are not compared with the spec's: {error}", "reported")
             return
+        self._on_clock = not fault
         self._checks.append(Check.fact("", "times", "all rows", fault, "every time is that of its step"))
-
-    def _refuse_window(self, first: int, last: int) -> None:
-        """A table that begins later departs from nothing: it lacks what its values are to be held against."""
-        if first > 0:
-            one = " (if its steps count from 1, number them from 0)" if first == 1 else ""
-            raise TableError(
-                f"{self.where} cannot be judged as it is: expected steps from 0 on, got {_steps(first, last)}{one}; "
-                f"a spec states its values from step 0 on, so give {_steps(0, first - 1)} too; where the spec states "
-                f"the same of every step, numbers from 0 will do"
-            )
-
-    def _refuse_cuts(self, path: NDArray, step: NDArray) -> None:
-        """Nor does one whose paths are as many steps each, in a row, and begin at steps of their own: a record, cut."""
-        count = np.bincount(path)
-        first = np.full(len(count), np.iinfo(np.int64).max)
-        last = np.zeros(len(count), np.int64)
-        np.minimum.at(first, path, step)
-        np.maximum.at(last, path, step)
-        if len(count) < 2 or len(np.unique(first)) < len(first) or np.any(last - first + 1 != count) or np.ptp(count):
-            return
-        later = int(np.argsort(first)[1])
-        raise TableError(
-            f"{self.where} cannot be judged as it is: expected each path to have steps from 0 on, got "
-            f"{many(len(count), 'path')} of {many(int(count[0]), 'step')} each that begin at steps of their own, such "
-            f"as {self.labels[later]} at step {first[later]}, as windows cut from one long record do; number the steps "
-            f"of each path from 0, or, if they are one path, give them one name"
-        )
 
     def _place(self, path: NDArray, step: NDArray) -> None:
         """Sort rows by path and step; name what is missing or there twice."""
@@ -322,22 +309,21 @@ class Table:
             cell, count = column.iloc[row], int(text.sum())
             if isinstance(cell, str) and _DECIMAL_COMMA.fullmatch(cell.strip()):
                 raise TableError(
-                    f"{self.where}: {name} has decimal commas, the first {cell!r} in row {row}; write numbers with a "
-                    f"point, or read the file with pandas.read_csv(…, decimal=',') and give validate the DataFrame"
+                    f"{self.where}: {name} has decimal commas, the first {cell!r} in {self.told(row)}; write "
+                    f"numbers with a point, or read the file with pandas.read_csv(…, decimal=',') and give validate "
+                    f"the DataFrame"
                 )
             if isinstance(cell, str) and _THOUSANDS.fullmatch(cell.strip()):
                 raise TableError(
-                    f"{self.where}: {name} has thousands separators, the first {cell!r} in row {row}; write numbers "
-                    f"without them, or read the file with pandas.read_csv(…, thousands=',') and give validate the "
-                    f"DataFrame"
+                    f"{self.where}: {name} has thousands separators, the first {cell!r} in {self.told(row)}; write "
+                    f"numbers without them, or read the file with pandas.read_csv(…, thousands=',') and give validate "
+                    f"the DataFrame"
                 )
             if count == column.notna().sum():
                 first = joined([repr(each) for each in dict.fromkeys(column.dropna())][:_SHOWN])
-                raise TableError(
-                    f"{self.where}: {name} holds text, such as {first}; expected numbers; {option(name)}"
-                )
+                raise TableError(f"{self.where}: {name} holds text, such as {first}; expected numbers; {option(name)}")
             are = "value is no number" if count == 1 else "values are no numbers"
-            fault = f"{count:,} {are}, the first {_cell(column, row)} in row {row}"
+            fault = f"{count:,} {are}, the first {_cell(column, row)} in {self.told(row)}"
             self._checks.append(Check.fact(name, "numbers", "all rows", fault))
         return values
 
@@ -351,10 +337,6 @@ def _cell(column: pd.Series, row: int) -> str:
     return repr(value) if isinstance(value, str) else str(value)
 
 
-def _steps(first: int, last: int) -> str:
-    return f"step {first}" if first == last else f"steps {first} to {last:,}"
-
-
 def _looks_like_times(column: pd.Series) -> bool:
     """Whether a column given as the step holds stamps, as dates or as text such as 2027-01-04 00:15."""
     if column.dtype.kind == "M":
@@ -363,12 +345,12 @@ def _looks_like_times(column: pd.Series) -> bool:
     return not first.strip().lstrip("+-").replace(".", "", 1).isdigit() and any(c in first for c in "-:/")
 
 
-def _codes(column: pd.Series) -> tuple[NDArray[np.int64], list[Any]]:
+def _codes(column: pd.Series, told: Told) -> tuple[NDArray[np.int64], list[Any]]:
     """Paths numbered in the order of their labels."""
     import pandas as pd
 
     if column.isna().any():
         row = int(np.argmax(column.isna().to_numpy()))
-        raise TableError(f"row {row} has no path; every row needs one in {column.name}")
+        raise TableError(f"{told(row)} has no path; every row needs one in {column.name}")
     codes, labels = pd.factorize(column, sort=True)
     return codes.astype(np.int64), list(labels)

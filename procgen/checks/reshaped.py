@@ -6,7 +6,7 @@ A table is taken to be in one of these where its columns say so, and no column h
 from __future__ import annotations
 
 import re
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from typing import TYPE_CHECKING, Any
 
 from procgen.checks.files import TableError
@@ -17,6 +17,7 @@ if TYPE_CHECKING:
     import pandas as pd
 
 LONG = "expected a column a series, as procgen export OUT -o FILE --layout long writes it"
+Told = Callable[[int], str]  # where a row is, for people: "line 7"
 _TURN = "__turn"  # which of several equal rows
 
 
@@ -60,10 +61,13 @@ class Panel(Found):
         self.time = self.pick("time", given, False)
         self.all: list[Any] = [c for c in (self.id, self.path, self.step, self.time, self.value) if c is not None]
 
-    def long(self, frame: pd.DataFrame) -> tuple[pd.DataFrame, Names]:
-        """The same with a column a series; what is missing is NaN, what is there twice stays so."""
-        frame = frame[self.all].assign(**{self.id: frame[self.id].astype(str)})
-        self._refuse(frame)
+    def long(self, frame: pd.DataFrame, told: Told) -> tuple[pd.DataFrame, Names, Told]:
+        """The same with a column a series; what is missing is NaN, what is there twice stays so.
+
+        `told` says where a row of the frame is, and what is returned beside the new frame where a row of that is.
+        """
+        given_rows = frame = frame[self.all].assign(**{self.id: frame[self.id].astype(str)})
+        self._refuse(frame, told)
         frame = frame[frame[self.id].isin(self.ids)]
         index = [c for c in (self.path, self.step, self.time) if c is not None]
         turn = frame.groupby([self.id, *index], dropna=False, sort=False).cumcount()
@@ -72,9 +76,17 @@ class Panel(Found):
         table = table.rename(columns=self.ids).reset_index().drop(columns=_TURN)
         roles = {"path": self.path, "step": self.step, "time": self.time}
         given = {role: name for role, name in roles.items() if name is not None}
-        return table, Names([str(c) for c in table.columns], self.spec, given, self.where)
+        names = Names([str(c) for c in table.columns], self.spec, given, self.where)
+        return table, names, lambda row: told(self._first(given_rows, table[index].iloc[row]))
 
-    def _refuse(self, frame: pd.DataFrame) -> None:
+    def _first(self, frame: pd.DataFrame, cells: pd.Series) -> int:
+        """The first row of a series of the spec that has these cells of path, step and time."""
+        there = frame[self.id].isin(self.ids).to_numpy()
+        for name, cell in cells.items():
+            there = there & (frame[name].isna() if cell != cell else frame[name] == cell).to_numpy()
+        return int(there.argmax())
+
+    def _refuse(self, frame: pd.DataFrame, told: Told) -> None:
         import pandas as pd
 
         there = list(dict.fromkeys(frame[self.id]))
@@ -89,7 +101,7 @@ class Panel(Found):
         if bad.any():
             row = int(bad.to_numpy().argmax())
             cell = frame[self.value].iloc[row]
-            raise TableError(f"{self.where}: expected numbers in {self.value}, got {cell!r} in row {row}; "
+            raise TableError(f"{self.where}: expected numbers in {self.value}, got {cell!r} in {told(row)}; "
                              f"mend it, or {option('value')}")  # fmt: skip
 
 
@@ -107,13 +119,14 @@ class Wide(Found):
         self.step, self.time = self.pick("step", given, False), self.pick("time", given, False)
         self.all: list[Any] = [c for c in (self.step, self.time, *paths) if c is not None]
 
-    def long(self, frame: pd.DataFrame) -> tuple[pd.DataFrame, Names]:
-        """The same with a column for the series, path after path."""
+    def long(self, frame: pd.DataFrame, told: Told) -> tuple[pd.DataFrame, Names, Told]:
+        """The same with a column for the series, path after path, and where its rows are."""
         index = {role: name for role, name in (("step", self.step), ("time", self.time)) if name is not None}
         (series,) = self.spec.series
         table = frame[self.all].melt([*index.values()], [*self.paths], "path", series)
         table["path"] = table["path"].map(self.paths)
-        return table, Names([str(c) for c in table.columns], self.spec, index, self.where)
+        names = Names([str(c) for c in table.columns], self.spec, index, self.where)
+        return table, names, lambda row: told(row % len(frame))
 
 
 def _index(keys: list[Any]) -> Any:

@@ -19,7 +19,7 @@ from procgen.spec.model import Frozen
 from procgen.spec.named import Named
 from procgen.spec.pages import read_within
 from procgen.spec.tree import Tree, show_scalar
-from procgen.spec.words import did_you_mean, one_of, unquote
+from procgen.spec.words import did_you_mean, one_of, row_told, unquote
 
 TABLE = "from_table"
 MOST_VALUES = 50_000  # they become a part of the spec
@@ -28,7 +28,7 @@ MOST_BYTES = 20 << 20  # of a table's file, and of its values in memory
 
 
 class Columns(dict[str, list[Any]]):
-    """The columns of a file by name; `rows` says of each row where it stands, for people: "line 7" or "row 6".
+    """The columns of a file by name; `rows` tells people where each row is: "line 7" or "row 5, counted from 0".
 
     Of columns with one name the last is here, which nobody may take; `names` has all names as they stand in the file.
     """
@@ -224,7 +224,7 @@ def _parquet(path: Path) -> Columns:
     _refuse_large(path)
     columns = Columns(read_within(path, None, MOST_BYTES).to_pydict())
     columns.names = pq.read_schema(path).names  # what is read has columns of one name side by side
-    columns.rows = [f"row {i}" for i in range(1, 1 + max(map(len, columns.values()), default=0))]
+    columns.rows = [row_told(i) for i in range(max(map(len, columns.values()), default=0))]
     return columns
 
 

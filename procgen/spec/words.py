@@ -36,6 +36,11 @@ OTHERWISE = {
 }
 
 
+def row_told(row: int) -> str:
+    """Where a row of a table without lines is, counted from 0 as by pandas, and so that nobody takes it otherwise."""
+    return f"row {row}, counted from 0" if row else "row 0, the first"
+
+
 def unknown_key(key: str, allowed: Iterable[str]) -> str:
     """Return the message for a key nobody declared, with the nearest valid one."""
     allowed = list(allowed)

@@ -177,8 +177,42 @@ def test_times_that_are_numbers(frame, tmp_path, unit, said):
         number = utc.astype(f"datetime64[{unit}]").astype(np.int64)
     frame.assign(time=number[frame["step"]]).drop(columns="step").to_csv(tmp_path / "t.csv", index=False)
     text = refused(tmp_path / "t.csv")
-    assert "in row 0 of time is a number, not a time; " in text
+    assert "in column time, line 2, is a number, not a time; " in text
     assert said in text
+
+
+def test_faults_of_a_text_are_told_by_their_lines(frame, tmp_path):
+    """Which an editor shows: line 1 has the column names, and blank lines count, as do the line ends in quotes."""
+    lines = frame[["path", "step", "x"]].assign(y="1").head(6).to_csv(index=False).splitlines()
+    lines[4] = lines[4][:-1] + "oops"
+    for before, expected in (([], 5), (["", "  ", ""], 8)):
+        text = "\n".join([*lines[:2], *before, *lines[2:]])
+        for name, opened in (("t.csv", open), ("t.csv.gz", gzip.open)):
+            with opened(tmp_path / name, "wt") as file:
+                file.write(text)
+            notes = [row.note for row in validate(tmp_path / name, SPEC).rows if row.what == "numbers"]
+            assert notes == [f"1 value is no number, the first 'oops' in line {expected}"]
+    quoted = "\n".join([lines[0] + ",note", lines[1] + ',"two\nlines"', *(line + "," for line in lines[2:])])
+    (tmp_path / "q.csv").write_text(quoted)
+    assert any(row.note.endswith("'oops' in line 6") for row in validate(tmp_path / "q.csv", SPEC).rows)
+
+
+def test_faults_in_the_time_of_a_row_are_told_where_the_row_was_given(frame, tmp_path):
+    """Though tables with a row an observation, or a column a path, are put in another order to be judged."""
+    utc = pd.to_datetime(SPEC.time.stamps(0, 60), unit="us", utc=True).strftime("%Y-%m-%dT%H:%M:%SZ").to_numpy()
+    panel = frame.assign(time=utc[frame["step"]]).drop(columns="step").melt(["path", "time"], ["x", "y"], "id", "value")
+    panel.loc[len(frame) + 7, "time"] = "soon"
+    panel.to_csv(tmp_path / "p.csv", index=False)
+    assert f"'soon' in column time, line {len(frame) + 9}, is no time" in refused(tmp_path / "p.csv")
+    panel.to_parquet(tmp_path / "p.parquet", index=False)
+    row = f"row {len(frame) + 7}, counted from 0, is no time"
+    assert row in refused(tmp_path / "p.parquet") and row in refused(panel)
+    one = read_spec({**SPEC.raw, "series": {"x": SPEC.raw["series"]["x"]}})
+    wide = frame.pivot(index="step", columns="path", values="x").rename(columns="path_{}".format).assign(time=utc)
+    wide.iloc[9, -1] = "soon"
+    wide.to_csv(tmp_path / "w.csv", index=False)
+    with pytest.raises(TableError, match=r"'soon' in column time, line 11, is no time"):
+        validate(tmp_path / "w.csv", one)
 
 
 def test_times_without_an_hour(frame, tmp_path):

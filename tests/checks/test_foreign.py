@@ -131,7 +131,7 @@ def test_text_and_empty_cells_are_named(frame, tmp_path):
     spoiled.to_csv(tmp_path / "t.csv", index=False)
     verdict = validate(tmp_path / "t.csv", SPEC)
     lines = "\n".join(row.note for row in verdict.rows if row.outcome == "departs")
-    assert "1 value is no number, the first 'n/a?' in row 7" in lines
+    assert "1 value is no number, the first 'n/a?' in line 9" in lines
     assert "1 value is not finite, the first at path 1, step 39" in lines
 
 
@@ -144,10 +144,10 @@ def test_text_and_empty_cells_are_named(frame, tmp_path):
         (lambda f: f, {"time": "at"}, "no column 'at' for time.*with --time-col NAME"),
         (lambda f: f, {"z": "x"}, "expected a series of the spec, one of x, y, or one of path, .*, got 'z'"),
         (lambda f: f.assign(step=f["step"] * 1000), None, "is the right column taken for the step.*--step-col NAME"),
-        (lambda f: f.assign(step=f["step"] + 0.5), None, "whole steps in step, got 0.5 in row 0; .*--step-col"),
+        (lambda f: f.assign(step=f["step"] + 0.5), None, "whole steps in step, got 0.5 in row 0, the first;"),
         (lambda f: f.assign(step=f["step"] - 3), None, "expected steps from 0 on in step, got -3"),
         (lambda f: f.iloc[:0], None, "has no rows"),
-        (lambda f: f.assign(path=f["path"].where(f.index != 4)), None, "row 4 has no path"),
+        (lambda f: f.assign(path=f["path"].where(f.index != 4)), None, "row 4, counted from 0 has no path"),
         (lambda f: f.assign(when="soon"), {"time": "when"}, "is no time; .*--time-col NAME"),
     ],
 )
@@ -202,13 +202,16 @@ def test_a_window_that_begins_later_cannot_be_judged(frame):
     """It departs from nothing: of no value that is there is anything wrong."""
     late = (
         "the table cannot be judged as it is: expected steps from 0 on, got steps 20 to 59; a spec states its values "
-        "from step 0 on, so give steps 0 to 19 too; where the spec states the same of every step, numbers from 0 "
-        "will do"
+        "from step 0 on, so give steps 0 to 19 too, as rows with empty values where they are missing; where the spec "
+        "states the same of every step, numbers from 0 will do"
     )
     with pytest.raises(TableError) as error:
         validate(frame[frame["step"] >= 20], SPEC)
     assert str(error.value) == late
-    one = r"got steps 1 to 58 \(if its steps count from 1, number them from 0\); .*, so give step 0 too;"
+    one = (
+        r"got steps 1 to 58 \(if its steps count from 1, number them from 0\); .*, so give step 0 too, as a row with "
+        "an empty value where it is missing;"
+    )
     with pytest.raises(TableError, match=one):
         validate(frame[(frame["step"] >= 1) & (frame["step"] < 59)], SPEC)
     with pytest.raises(TableError, match="got steps 20 to 59"):
@@ -344,11 +347,11 @@ def test_one_time_off_and_a_column_that_holds_none(quarters):
     table = timed(table)
     table.loc[[41], "time"] += pd.Timedelta("1min")
     line = validate(table, spec).headline[0]
-    said = "structure: 1 time of 6,000 is not that of its step, the first 2027-10-30 22:16:00+00:00 in row 41, step 1: "
+    said = "structure: 1 time of 6,000 is not that of its step, the first 2027-10-30 22:16:00+00:00 at step 1, row 41"
     assert line.startswith(said)
     told = [row for row in validate(table.assign(time="soon"), spec).rows if row.what == "times"]
     assert [(row.outcome, row.note) for row in told] == [
-        ("reported", "they are not compared with the spec's: 'soon' in row 0 of time is no time")
+        ("reported", "they are not compared with the spec's: 'soon' in column time, row 0, the first, is no time")
     ]
 
 
@@ -359,7 +362,7 @@ def test_one_time_off_and_a_column_that_holds_none(quarters):
 def test_dates_with_the_day_or_the_month_first_are_refused(quarters, style, mended, tmp_path):
     spec, table = quarters
     timed(table).assign(time=lambda t: t["time"].dt.strftime(style)).drop(columns="step").to_csv(tmp_path / "t.csv")
-    with pytest.raises(TableError, match="in row 0 of time may have its day or its month first") as error:
+    with pytest.raises(TableError, match="in column time, line 2, may have its day or its month first") as error:
         validate(tmp_path / "t.csv", spec)
     assert str(error.value).endswith(f"write times with the year first (ISO 8601), such as {mended}")
 
@@ -368,7 +371,7 @@ def test_semicolons_are_read_and_decimal_commas_named(frame, tmp_path):
     frame.to_csv(tmp_path / "points.csv", sep=";", index=False)
     assert validate(tmp_path / "points.csv", SPEC).agrees is True
     frame.to_csv(tmp_path / "commas.csv", sep=";", decimal=",", index=False)
-    with pytest.raises(TableError, match=r"x has decimal commas, the first '[-0-9]+,[0-9]+' in row 0; write numbers"):
+    with pytest.raises(TableError, match=r"x has decimal commas, the first '[-0-9]+,[0-9]+' in line 2; write numbers"):
         validate(tmp_path / "commas.csv", SPEC)
 
 

@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 
 import procgen as pg
+from procgen.checks.files import TableError
 from procgen.checks.kalman import Kalman
 from procgen.checks.missing import GapKalman
 
@@ -140,6 +141,41 @@ def test_rows_left_out_are_the_missing_values_that_are_stated():
     assert verdict.agrees and "judged as missing values" in row.note
     fewer = pg.validate(frame, spec(share=0.02))
     assert fewer.agrees is False and "rate of new gaps: larger than stated" in fewer.headline[0]
+
+
+@pytest.mark.parametrize("paths", [1, 300])
+@pytest.mark.parametrize("steps", ["step", "time", "both"])
+def test_a_first_row_that_no_path_has_is_missing_as_any_other(paths, steps):
+    """Its chance with one path is 0.25; that of 300 paths is no accident, which what is missing together tells."""
+    stated = HEAD | {"paths": paths, "series": {"x": [{"missing": {"of": AR, "share": 0.25, "gap": 3}}]}}
+    stated = pg.load(stated | {"time": {"start": "2027-01-04", "every": "1h", "steps": HEAD["time"]["steps"]}})
+    frame = pg.render(stated).to_pandas()
+    frame = frame[frame["x"].notna() & (frame["step"] > 0)]
+    verdict = pg.validate(frame.drop(columns={"step": "time", "time": "step"}.get(steps, [])), stated)
+    (row,) = [r for r in verdict.rows if r.what == "every path and step once"]
+    assert "the first path 0, step 0: judged as missing values, which the spec states" in row.note
+    assert verdict.agrees is (paths == 1)
+    assert all("missing" in line or "gaps" in line for line in verdict.headline)
+
+
+def test_gaps_at_the_start_as_long_as_stated_are_missing_and_longer_ones_a_window():
+    stated = HEAD | {"paths": 1, "time": {"start": "2027-01-04", "every": "1h", "steps": 400}}
+    stated = pg.load(stated | {"series": {"x": [{"missing": {"of": AR, "share": 0.2, "gap": 20}}]}})
+    frame = pg.render(stated).to_pandas().dropna()
+    late = frame[frame["step"] >= 60]  # 0.2 × 0.95⁵⁹ is 0.010
+    assert pg.validate(late, stated).agrees
+    with pytest.raises(TableError, match=r"got steps 3.. to 399; .* as rows with empty values where they are missing"):
+        pg.validate(frame[frame["step"] >= 300], stated)  # 0.2 × 0.95²⁹⁹ is 4e-8
+
+
+@pytest.mark.parametrize("paths", [1, 300])
+def test_rows_without_steps_do_not_tell_which_are_missing(paths):
+    stated = pg.load(spec().raw | {"paths": paths})
+    frame = pg.render(stated).to_pandas().drop(columns="step")
+    with pytest.raises(TableError, match="no column of steps or times that tells which; name the right one"):
+        pg.validate(frame.dropna(subset="x"), stated)
+    assert pg.validate(frame, stated).agrees is not False
+    assert pg.validate(frame.groupby("path").head(HEAD["time"]["steps"] - 1), stated).agrees is not False
 
 
 def test_rows_left_out_are_told_where_a_series_states_no_missing_values():

@@ -182,6 +182,13 @@ def test_records_that_do_not_fit(tmp_path, table, message):
     assert re.search(message, said)
 
 
+@pytest.mark.parametrize(("lost", "row"), [(1.0, "row 0, the first"), (5.0, "row 4, counted from 0")])
+def test_a_row_that_has_no_line_is_told_by_its_number(tmp_path, lost, row):
+    days("2027-03-01", 9).replace(lost, np.nan).to_parquet(tmp_path / "h.parquet", index=False)
+    (said,) = faults(spec_file(tmp_path, {**FILE, "file": "h.parquet", "time": "day"}, DAILY))
+    assert f"in column load on {row}, where day is 2027-03-0" in said
+
+
 @pytest.mark.parametrize(
     ("before", "message"),
     [
