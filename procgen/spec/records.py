@@ -27,6 +27,7 @@ else:
 
 
 def _made(cls: Any, frozen: bool, eq: bool) -> type:
+    cls.__doc__ = cls.__doc__ or cls.__qualname__  # or a signature would be made of it
     cls = dataclasses.dataclass(init=False, repr=False, eq=False)(cls)
     if not all(one.init and one.hash is None and not one.kw_only for one in fields(cls)):
         raise TypeError(f"{cls.__qualname__} has a field that only `dataclasses` makes; take dataclass from there")
