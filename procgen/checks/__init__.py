@@ -13,7 +13,8 @@ goes through the values and leaves sums (`gather`); `judgement` makes checks of 
   `copies`, `prints`, `repeated`, `extremes`. Of shocks: `scores` and `uniforms`, `shocks`, `stretches`, `farthest`,
   `together`, `pairs`, `tied` and `untied`. Of what has no such shocks: `errors`, `squares`, `neighbours`, `log_sizes`,
   `slow`, `waves`, `special`, `led`. Over paths and their order: `apart`, `start`, `masks`, `ordered`.
-- The same, compiled: `strips` and `fused` (wide tiles), `fused_few` (few paths), `crossed` (pairs), `stepped`.
+- The same, compiled: `strips` and `fused` (wide tiles), `fused_few` (few paths), `crossed` (pairs), `stepped`,
+  `beyond` (far values).
 - Judging. `judge` makes findings, with `judge_moments`, `judge_pools` and `judge_shocks` for the tests of each kind;
   `limits`, `tails` and `saddle` give p-values, `power` the sizes that would be found.
 - Telling. Which departures come first, and what only follows from them: `attribution`, `common`, `lifted`, `shape`,

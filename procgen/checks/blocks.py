@@ -21,6 +21,7 @@ from procgen.chance.kernel import is_compiling, machine
 BLOCK = 64  # steps
 GROUP = 16  # paths: a lane group of the ensemble, the finest cut between two parts
 WIDE = 32  # paths from which on compiled passes are worth their calls (measured: at 16 neither form is quicker)
+_FEW = 256  # values beyond bounds for which room is made
 _local = threading.local()
 
 
@@ -75,6 +76,19 @@ def in_one_pass(name: str, *args: Any, module: str = "fused") -> None:
 def in_few(name: str, *args: Any) -> None:
     """Call a function of `fused_few`, which goes along the paths one by one."""
     in_one_pass(name, *args, module="fused_few")
+
+
+def places_beyond(x: NDArray, rows: NDArray, low: NDArray, high: NDArray) -> tuple[NDArray, NDArray, NDArray]:
+    """Of the values of some rows of x that are below low or above high (rows,): place among the rows, column, value."""
+    if is_compiling() and x.flags.c_contiguous:
+        at, columns, found = np.empty(_FEW, np.int64), np.empty(_FEW, np.int64), np.empty(1, np.int64)
+        values = np.empty(_FEW)
+        in_one_pass("beyond", x, rows, low, high, at, columns, values, found, module="beyond")
+        if (count := int(found[0])) <= _FEW:
+            return at[:count], columns[:count], values[:count]
+    some = x[rows]
+    at, columns = np.nonzero((some < low[:, None]) | (some > high[:, None]))
+    return at, columns, some[at, columns]
 
 
 def all_known(z: NDArray) -> bool:

@@ -15,6 +15,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.checks.blocks import places_beyond
 from procgen.checks.judge import Finding
 from procgen.checks.verdict import Check
 from procgen.checks.words import FARTHEST, number
@@ -68,13 +69,15 @@ class Reach:
                 mean, sd = mean[rows], sd[rows]
             if not rows.size:
                 return known, (0, 0)
-            sizes = np.minimum(np.abs(x[rows] - mean[:, None]) / sd[:, None], _FARTHEST)
-        sizes[~np.isfinite(x[rows])] = 0.0
+            room = _JUST * min(least, self._allowed) * sd
+            at, paths, values = places_beyond(x, rows, mean - room, mean + room)
+            mean, sd = mean[at], sd[at]
+            sizes = np.minimum(np.abs(values - mean) / sd, _FARTHEST)
+        sizes[~np.isfinite(values)] = 0.0
         found = list(known)
-        for at, path in np.argwhere(sizes >= least).tolist():
-            row = int(rows[at])
-            place = -first_path - path, -first_step - row
-            found.append([float(sizes[at, path]), *place, float(x[row, path]), float(mean[at]), float(sd[at])])
+        places = (-first_path - paths).tolist(), (-first_step - rows[at]).tolist()
+        seen = zip(sizes.tolist(), *places, values.tolist(), mean.tolist(), sd.tolist(), strict=True)
+        found += [list(each) for each in seen if each[0] >= least]
         outside, absurd = (int(np.count_nonzero(sizes > times * self._allowed)) for times in (1.0, _ABSURD))
         return merged(found), (outside, absurd)
 

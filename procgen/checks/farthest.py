@@ -15,6 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.checks import judge
+from procgen.checks.blocks import places_beyond
 from procgen.checks.judge import Finding
 from procgen.checks.scores import Scores
 from procgen.checks.verdict import Check
@@ -55,14 +56,13 @@ def farthest(
             least = max(least, float(np.nextafter(np.partition(worst, -KEPT)[-KEPT], 0.0)))
         if not (worst > least).any():
             return list(known)
-        rows = np.flatnonzero(np.repeat(worst > least, len(g) // len(worst)))
-        sizes = np.abs(g[rows])
-        at, paths = np.nonzero(sizes > least)
-    found = sizes[at, paths]
-    first = np.lexsort((paths, at, -found))[:KEPT]
+        rows = np.flatnonzero(worst > least if len(worst) == len(g) else np.repeat(worst > least, len(g) // len(worst)))
+        bound = np.full(len(rows), least)
+        at, paths, found = places_beyond(g, rows, -bound, bound)
+    places = zip((-np.abs(found)).tolist(), rows[at].tolist(), paths.tolist(), strict=True)
     new: list[Far] = []
-    for row, path, size in zip(rows[at[first]].tolist(), paths[first].tolist(), found[first].tolist(), strict=True):
-        new.append([size, -first_step - row, -first_path - path, float(z[row, path]), float(x[row, path])])
+    for size, row, path in sorted(places)[:KEPT]:
+        new.append([-size, -first_step - row, -first_path - path, float(z[row, path]), float(x[row, path])])
     return merged([*known, *new])
 
 

@@ -27,7 +27,7 @@ from procgen.checks.start import Early
 from procgen.checks.tree import Tree, ranges
 from procgen.ensemble.plan import Block
 
-TILE = 1 << 17  # values of one series in a tile: with fewer, calls cost more than what passes through the caches
+TILE = 1 << 18  # values of one series in a tile: with fewer, calls cost more than what passes through the caches
 STRIP = 64  # paths that are turned together
 COMPILING_REPAYS = 40_000_000  # values of one process, 15 to 25 ns each: to compile, which pays next time
 LOADING_REPAYS = 4_000_000  # the same where there is machine code, which is loaded in 0.06 s

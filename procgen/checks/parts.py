@@ -13,6 +13,7 @@ import math
 import secrets
 import threading
 from collections.abc import Callable, Iterator, Mapping
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -55,25 +56,34 @@ def gather_chain(task: Mapping[str, Any], tick: Tick) -> list[dict[str, Any]]:
     one = Pass(plan, tick, task["shared"]["compile"], _outmost(task["run"]))
     for first_path, first_step, values in chain.blocks():
         one.absorb(first_path, first_step, values)
-    sums = [[first, end, *_packed(some)] for first, (end, some) in one.tree.nodes.items()]
+    sums = [[first, end, Sums(some)] for first, (end, some) in one.tree.nodes.items()]
     return [{"sums": sums, "nodes": chain.nodes, "faults": chain.faults}]
 
 
-def unpacked(plan: Plan, facts: Mapping[str, Any], data: bytes | str) -> Gather:
-    """Sums from a record of this process, or from one of another, where bytes are text."""
+@dataclass(frozen=True)
+class Sums:
+    """Sums in a record, for this process or to be packed for another."""
+
+    gather: Gather
+
+    def packed(self) -> tuple[dict[str, Any], bytes]:
+        """Facts, among them names, kinds and shapes of all arrays, and the arrays one behind the other."""
+        facts, arrays = self.gather.state()
+        facts["arrays"] = [[name, values.dtype.str, list(values.shape)] for name, values in arrays.items()]
+        return facts, b"".join([np.ascontiguousarray(values).data for values in arrays.values()])
+
+
+def unpacked(plan: Plan, sums: Any) -> Gather:
+    """The sums in a record of this process, or of another one, of which bytes may have come as text."""
+    if isinstance(sums, Sums):
+        return sums.gather
+    facts, data = sums
     data = base64.b64decode(data) if isinstance(data, str) else data
     at, arrays = 0, {}
     for name, kind, shape in facts["arrays"]:
         arrays[name] = np.frombuffer(data, kind, math.prod(shape), at).reshape(shape)
         at += arrays[name].nbytes
     return Gather(plan).restore(facts, arrays)
-
-
-def _packed(sums: Gather) -> tuple[dict[str, Any], bytes]:
-    """Facts, among them names, kinds and shapes of all arrays, and the arrays one behind the other."""
-    facts, arrays = sums.state()
-    facts["arrays"] = [[name, values.dtype.str, list(values.shape)] for name, values in arrays.items()]
-    return facts, b"".join([np.ascontiguousarray(values).data for values in arrays.values()])
 
 
 _CONTEXTS: dict[str, tuple[OnDisk, Plan]] = {}

@@ -17,7 +17,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from procgen.checks import rounding
-from procgen.checks.blocks import Window, across, add_products, all_known, compiled, in_one_pass, scratch
+from procgen.checks.blocks import BLOCK, Window, across, add_products, all_known, compiled, in_one_pass, scratch
 from procgen.checks.slow import Slow, SlowLane, plan_slow
 from procgen.spec.records import dataclass
 from procgen.theory.lumps import atoms_of
@@ -331,6 +331,8 @@ class PoolLane:
         self._look(rows)
         add_products(self.sums[0], rows, None, start)
         both = self.window.push(rows)
+        if compiled(x.shape[1]) and (pool.slope is None or pool.steady) and self._at_once(both, end - start, start):
+            return
         for k, lag in enumerate(pool.lags):
             count = min(end - start, len(both) - lag)
             if count <= 0:
@@ -340,6 +342,20 @@ class PoolLane:
                 slope = pool.slope[k, at + end - start - count : at + end - start, None]
                 new = np.subtract(new, slope * earlier, out=scratch(count, x.shape[1], 1))
             add_products(self.sums[1 + k], new, earlier, end - count)
+
+    def _at_once(self, both: NDArray, steps: int, first: int) -> bool:
+        """Add the products at all lags of the last steps, of which the first is that many after a multiple of 64.
+
+        Whether all are known: if not, nothing is added.
+        """
+        counts = [max(min(steps, len(both) - lag), 0) for lag in self.pool.lags]
+        sums, lags = self.sums[1:].copy(), np.array(self.pool.lags)
+        room = np.empty(sums.shape[1])
+        in_one_pass("lagged", both, both, steps + first % BLOCK, lags, np.array(counts), sums, room)
+        if not np.isfinite(sums).all():
+            return False
+        self.sums[1:] = sums
+        return True
 
     def averages(self) -> NDArray:
         """(paths, size): what is averaged along each path, minus its theory."""

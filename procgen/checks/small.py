@@ -36,10 +36,22 @@ class Steps:
         self.scales = 1.0 / np.where(sds > 0.0, sds, np.nan)
         self.seen = np.empty(self.gains.shape)  # what a state before the steps adds to each of them
         self.moved = np.eye(len(c))  # and what to the state after them
+        if len(c) == 1:
+            self._of_one()
+            return
         for i, gain in enumerate(self.gains):
             row = c @ self.moved
             self.seen[i] = row * self.scales[i]
             self.moved = a @ self.moved - gain[:, None] * row
+
+    def _of_one(self) -> None:
+        """The same for a state of one number, in numbers of Python's: each series of many has steps of its own."""
+        a, c, moved, rows = float(self.a[0, 0]), float(self.c[0]), 1.0, []
+        for gain in self.gains[:, 0].tolist():
+            rows.append(c * moved)
+            moved = a * moved - gain * rows[-1]
+        self.seen[:, 0] = np.array(rows) * self.scales
+        self.moved[0, 0] = moved
 
     def take(self, y: NDArray, mean: NDArray, start: NDArray, out: NDArray) -> NDArray:
         """Innovations, into `out`, of rows that are a whole number of chunks; the state (d, paths) after them."""

@@ -1,8 +1,9 @@
 """Who works on the chains of an ensemble: this process alone, or this process and worker processes beside it.
 
 A task is data for JSON, and the work is a function named as "module:function", which takes a task and a tick and
-returns a list of records, data for JSON and bytes: rendering draws a chain, validation sums one up. Workers are plain
-child processes that read tasks and write records as lines of JSON. So a caller's script needs no
+returns a list of records: data for JSON, bytes, and what is `Packed` into these where it goes to another process.
+Rendering draws a chain, validation sums one up. Workers are plain child processes that read tasks and write records as
+lines of JSON, with bytes as they are before them. So a caller's script needs no
 `if __name__ == "__main__"`, nothing is forked under running threads, and no pickle is read. The calling process works
 too: while workers import (0.2 s) it is already at it. A command forks its workers where that is safe (`forked`), before
 any thread is begun.
@@ -22,7 +23,7 @@ import threading
 from collections import deque
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from types import FrameType
-from typing import Any, Protocol, TextIO
+from typing import Any, BinaryIO, Protocol, runtime_checkable
 
 from procgen.ensemble import forked
 from procgen.ensemble.errors import EnsembleError, lacks_memory, system_sentence
@@ -33,6 +34,7 @@ Progress = Callable[[int, int], None]  # (rows done so far, rows in all)
 Records = list[dict[str, Any]]
 FEWER = "use fewer workers (--workers, workers=)"
 WORTH = 4_000_000  # values that repay one more process that draws
+_PLACE = " bytes"  # in place of bytes, their number among those of the answer
 
 
 def function(name: str) -> Callable[..., Any]:
@@ -41,9 +43,49 @@ def function(name: str) -> Callable[..., Any]:
     return getattr(importlib.import_module(module), attribute)
 
 
+@runtime_checkable
+class Packed(Protocol):
+    """What a record may hold for this process alone."""
+
+    def packed(self) -> Any:
+        """The same for another one: data for JSON and bytes."""
+
+
 def as_json(answer: Mapping[str, Any]) -> str:
-    """An answer that goes to another process; bytes go as text, and stay what they are in this one."""
-    return json.dumps(answer, default=lambda data: base64.b64encode(data).decode())
+    """An answer that goes to another machine as text alone."""
+    return json.dumps(answer, default=lambda x: x.packed() if isinstance(x, Packed) else base64.b64encode(x).decode())
+
+
+def as_bytes(answer: Mapping[str, Any]) -> Iterator[bytes]:
+    """An answer that goes through a pipe: a line with the sizes of its bytes, these, and a line of JSON."""
+    data: list[bytes] = []
+
+    def place(found: Any) -> Any:
+        if isinstance(found, Packed):
+            return found.packed()
+        data.append(found)
+        return {_PLACE: len(data) - 1}
+
+    text = json.dumps(answer, default=place)
+    if data:
+        yield json.dumps({"sizes": [len(each) for each in data]}).encode() + b"\n"
+        yield from data
+    yield text.encode() + b"\n"
+
+
+def messages(pipe: BinaryIO) -> Iterator[dict[str, Any]]:
+    """What comes through a pipe, line by line, until it is closed."""
+    data: list[bytes] = []
+
+    def placed(found: dict[str, Any]) -> Any:
+        return data[found[_PLACE]] if _PLACE in found else found
+
+    for line in pipe:
+        message = json.loads(line, object_hook=placed)
+        if "sizes" in message:
+            data[:] = [pipe.read(size) for size in message["sizes"]]
+        else:
+            yield message
 
 
 def processors() -> int:
@@ -266,8 +308,8 @@ def in_threads(
 class Process(Protocol):
     """A worker process: `subprocess.Popen`, or `Forked`."""
 
-    stdin: TextIO
-    stdout: TextIO
+    stdin: BinaryIO
+    stdout: BinaryIO
 
     def wait(self) -> int: ...
     def terminate(self) -> None: ...
@@ -302,14 +344,13 @@ class Helper(threading.Thread):
 
     def _send(self, task: Mapping[str, Any]) -> None:
         try:
-            self.process.stdin.write(json.dumps({"work": self.work, "task": task}) + "\n")
+            self.process.stdin.write(json.dumps({"work": self.work, "task": task}).encode() + b"\n")
             self.process.stdin.flush()
         except OSError:
             pass  # it is dead, and `_receive` says so
 
     def _receive(self) -> Records:
-        for line in self.process.stdout:
-            message = json.loads(line)
+        for message in messages(self.process.stdout):
             if "rows" in message:
                 self.crew.tick(message["rows"])
             elif "error" in message:
@@ -346,8 +387,6 @@ def _program(inherit: int | None) -> Any:
         [sys.executable, "-P", "-c", "from procgen.ensemble.worker import main; main()"],
         stdin=subprocess.PIPE,
         stdout=subprocess.PIPE,
-        text=True,
-        encoding="utf-8",
         env={**os.environ, "PYTHONPATH": os.pathsep.join(path or os.getcwd() for path in sys.path)},
         pass_fds=() if inherit is None else (inherit,),
         process_group=0 if os.name == "posix" else None,  # Ctrl-C is for this process alone to act on

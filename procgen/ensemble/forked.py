@@ -14,7 +14,7 @@ import sys
 import threading
 import traceback
 from collections.abc import Iterator
-from typing import NoReturn, TextIO
+from typing import BinaryIO, NoReturn
 
 from procgen.ensemble import own
 
@@ -54,8 +54,8 @@ class Forked:
             opened.pop_all()
         os.close(tasks)
         os.close(answers)
-        self.stdin: TextIO = open(to_worker, "w", encoding="utf-8")
-        self.stdout: TextIO = open(from_worker, encoding="utf-8")
+        self.stdin: BinaryIO = open(to_worker, "wb")
+        self.stdout: BinaryIO = open(from_worker, "rb")
         self.returncode: int | None = None
         self._reaping = threading.Lock()
 
@@ -107,7 +107,7 @@ def _live(tasks: int, answers: int, pipes: set[int], inherit: int | None) -> NoR
         sys.stderr = sys.__stderr__  # a progress bar may have put its own there
         from procgen.ensemble.worker import Worker
 
-        worker = Worker(open(1, "w", encoding="utf-8", closefd=False))
+        worker = Worker(open(1, "wb", closefd=False))
         signal.signal(signal.SIGTERM, worker.stop)
         signal.pthread_sigmask(signal.SIG_UNBLOCK, STOPS)
         worker.work()

@@ -1,4 +1,4 @@
-"""A worker process: tasks come in on standard input and records go out on standard output, a JSON line each."""
+"""A worker process: tasks come in on standard input, a JSON line each; records go out on standard output."""
 
 from __future__ import annotations
 
@@ -7,9 +7,10 @@ import os
 import signal
 import sys
 import threading
+from collections.abc import Iterable, Mapping
 from queue import SimpleQueue
 from types import FrameType
-from typing import Any, TextIO
+from typing import Any, BinaryIO
 
 from procgen.ensemble.own import claim, settled
 
@@ -17,7 +18,7 @@ from procgen.ensemble.own import claim, settled
 class Worker:
     """Works on tasks until standard input ends; when that is because the parent died, it ends at once."""
 
-    def __init__(self, answers: TextIO) -> None:
+    def __init__(self, answers: BinaryIO) -> None:
         self.answers, sys.stdout = answers, sys.stderr
         self.tasks: SimpleQueue[str | None] = SimpleQueue()
         self.busy = threading.Event()
@@ -31,7 +32,7 @@ class Worker:
             self.busy.clear()  # before it is heard, since the next task may come at once
             if self.stopped:
                 raise SystemExit(128 + signal.SIGTERM)
-            self._say(answer)
+            self._say(*answer)
 
     def stop(self, number: int, frame: FrameType | None) -> None:
         """Stop at the next tick, where a half-written part is removed: signals come at any instruction."""
@@ -39,9 +40,9 @@ class Worker:
             os._exit(128 + number)
         self.stopped = True
 
-    def _say(self, message: str) -> None:
+    def _say(self, *pieces: bytes) -> None:
         try:
-            self.answers.write(message + "\n")
+            self.answers.writelines(pieces)
             self.answers.flush()
         except BrokenPipeError:
             os._exit(1)  # the parent is gone: nothing may be written any more
@@ -49,22 +50,22 @@ class Worker:
     def _tick(self, rows: int) -> None:
         if self.stopped:
             raise SystemExit(128 + signal.SIGTERM)
-        self._say(json.dumps({"rows": rows}))
+        self._say(_line({"rows": rows}))
 
-    def _answer(self, work: str, task: dict[str, Any]) -> str:
+    def _answer(self, work: str, task: dict[str, Any]) -> Iterable[bytes]:
         from procgen.ensemble.errors import EnsembleError, lacks_memory, system_sentence
 
         try:
-            from procgen.ensemble.engines import as_json, function
+            from procgen.ensemble.engines import as_bytes, function
 
-            return as_json({"records": function(work)(task, self._tick)})
+            return list(as_bytes({"records": function(work)(task, self._tick)}))
         except EnsembleError as error:
-            return json.dumps({"error": str(error)})
+            return [_line({"error": str(error)})]
         except Exception as error:
             if lacks_memory(error):
-                return json.dumps({"memory": ""})
+                return [_line({"memory": ""})]
             if isinstance(error, OSError):
-                return json.dumps({"error": system_sentence(error, "the work of a worker process")})
+                return [_line({"error": system_sentence(error, "the work of a worker process")})]
             raise
 
     def _listen(self) -> None:
@@ -79,10 +80,13 @@ class Worker:
         self.tasks.put(None)
 
 
+def _line(message: Mapping[str, Any]) -> bytes:
+    return json.dumps(message).encode() + b"\n"
+
+
 def main() -> None:
     """Be a worker of the process that holds the other end of standard input and output."""
     claim()
-    sys.stdout.reconfigure(encoding="utf-8")  # type: ignore[union-attr]
-    worker = Worker(sys.stdout)
+    worker = Worker(sys.stdout.buffer)
     signal.signal(signal.SIGTERM, worker.stop)
     worker.work()

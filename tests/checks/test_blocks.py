@@ -6,7 +6,8 @@ import numpy as np
 import pytest
 from scipy.special import ndtr
 
-from procgen.checks.blocks import Window, across, add_lagged, add_products
+from procgen.chance import kernel
+from procgen.checks.blocks import Window, across, add_lagged, add_products, places_beyond
 from procgen.checks.scores import BINS
 from procgen.checks.uniforms import bin_counts, uniforms
 
@@ -67,3 +68,19 @@ def test_uniforms_against_scipy():
     counts = np.bincount(np.minimum((ndtr(g) * BINS).astype(int), BINS - 1).ravel(), minlength=BINS)
     assert np.abs(bin_counts(u) - counts).sum() <= 8  # a few lie within 3e-9 of an edge
     assert np.isnan(uniforms(np.full((1, 2), np.nan))).all()
+
+
+@pytest.mark.skipif(not kernel.available(), reason="numba is not installed")
+@pytest.mark.parametrize("bound", [0.1, 1.0, 3.0, 9.0])
+def test_values_beyond_bounds_are_the_same_in_both_forms(bound):
+    x = np.random.default_rng(5).standard_normal((40, 53))
+    x[3, 7], x[4, 8] = np.nan, np.inf
+    rows = np.array([0, 3, 4, 30])
+    low, high = np.full(4, -bound), bound * np.array([1.0, 2.0, 1.0, 0.5])
+    plain = places_beyond(x, rows, low, high)
+    with kernel.compiling():
+        compiled = places_beyond(x, rows, low, high)
+    for one, other in zip(plain, compiled, strict=True):
+        np.testing.assert_array_equal(one, other)
+    known = (x[rows] < low[:, None]) | (x[rows] > high[:, None])
+    assert len(plain[0]) == known.sum() and (plain[2] == x[rows][known]).all()

@@ -6,6 +6,7 @@ import statsmodels.api as sm
 
 from procgen.chance import kernel
 from procgen.checks.kalman import Kalman
+from procgen.checks.small import Steps
 
 
 def drawn(kalman, steps, paths, seed):
@@ -157,3 +158,15 @@ def test_steps_and_matrix_products_agree(name):
     whole, _ = kalman.innovations(y, kalman.start(16), 0)
     some, _ = kalman.innovations(y[:, :15], kalman.start(15), 0)
     np.testing.assert_allclose(some, whole[:, :15], atol=1e-11)
+
+
+def test_steps_of_a_state_of_one_number_are_those_of_any_state():
+    one = Steps(
+        np.array([[0.7]]), np.array([1.3]), [np.array([0.5]), np.array([0.4]), np.array([0.4])], [2.0, 1.5, 0.0]
+    )
+    # the same state twice, of which only one is seen
+    gains = [np.array([gain, 0.0]) for gain in (0.5, 0.4, 0.4)]
+    two = Steps(np.diag([0.7, 0.0]), np.array([1.3, 0.0]), gains, [2.0, 1.5, 0.0])
+    np.testing.assert_allclose(one.seen[:, 0], two.seen[:, 0], rtol=1e-14)
+    assert one.moved[0, 0] == pytest.approx(two.moved[0, 0], rel=1e-14)
+    assert one.moved[0, 0] == pytest.approx((0.7 - 0.5 * 1.3) * (0.7 - 0.4 * 1.3) ** 2, rel=1e-14)
