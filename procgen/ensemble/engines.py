@@ -17,7 +17,6 @@ import importlib
 import json
 import os
 import signal
-import subprocess
 import sys
 import threading
 from collections import deque
@@ -383,6 +382,8 @@ class Helper(threading.Thread):
 
 def _program(inherit: int | None) -> Any:
     """A worker process begun as a program of its own."""
+    import subprocess
+
     return subprocess.Popen(
         [sys.executable, "-P", "-c", "from procgen.ensemble.worker import main; main()"],
         stdin=subprocess.PIPE,
