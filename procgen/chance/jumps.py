@@ -2,13 +2,13 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 
 from procgen.chance.laws.mixture import Normals
 from procgen.chance.tables import GRID, Poisson
+from procgen.spec.records import dataclass
 
 
 @dataclass(frozen=True)

@@ -41,6 +41,7 @@ _AT_HAND = 64  # steps of pieces that are brought beside each other at a time
 _compiling: ContextVar[bool] = ContextVar("compiling", default=False)
 
 
+@cache
 def available() -> bool:
     """Whether kernels can be compiled here, that is, whether numba is installed."""
     return find_spec("numba") is not None

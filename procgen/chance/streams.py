@@ -11,13 +11,13 @@ counted backwards, step -1 first, so that a longer past moves nothing.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
 from functools import cached_property
 from hashlib import sha256
 
 import numpy as np
 
 from procgen.chance.kernel import is_compiling, machine, uniforms
+from procgen.spec.records import dataclass
 
 STREAM_VERSION = 1
 LANES = 16

@@ -8,7 +8,6 @@ from __future__ import annotations
 
 from bisect import bisect_right
 from collections.abc import Callable
-from dataclasses import dataclass
 from functools import cached_property, lru_cache
 from typing import Any
 
@@ -19,6 +18,7 @@ from procgen.chance.counting import negative_binomial, poisson
 from procgen.chance.elementary import exp, log, log1p
 from procgen.chance.gamma import log_gamma
 from procgen.chance.kernel import is_compiling, machine
+from procgen.spec.records import dataclass
 
 Array = np.ndarray
 GRID = 2.0**52

@@ -3,11 +3,11 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
 from itertools import combinations
 from typing import TYPE_CHECKING, Any
 
 from procgen.checks.words import cause, effects, joined, sort_of
+from procgen.spec.records import dataclass
 
 if TYPE_CHECKING:
     from procgen.checks.attribution import Groups

@@ -9,7 +9,6 @@ paths, are larger by f themselves.
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -17,6 +16,7 @@ from numpy.typing import NDArray
 
 from procgen.checks import tails
 from procgen.checks.words import BY_PHASE, CUT, FARTHEST, FARTHEST_SHOCK
+from procgen.spec.records import dataclass
 
 if TYPE_CHECKING:
     from procgen.checks.verdict import Check

@@ -10,7 +10,6 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterator
-from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -19,6 +18,7 @@ from numpy.typing import NDArray
 from procgen.chance.kernel import is_compiling
 from procgen.checks.blocks import BLOCK, in_few, in_one_pass, scratch
 from procgen.checks.verdict import Check
+from procgen.spec.records import dataclass
 
 STUCK, COPIED = "values that stay", "copied stretches"
 KEPT = 1 << 17  # marks of a series

@@ -3,10 +3,10 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping, Sequence
-from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 from procgen.checks.words import SCATTER, START, alike, joined
+from procgen.spec.records import dataclass
 
 if TYPE_CHECKING:
     from procgen.checks.verdict import Check

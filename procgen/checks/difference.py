@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import json
 from collections.abc import Callable, Iterable, Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -23,6 +23,7 @@ from procgen.ensemble.source import read_spec
 from procgen.ensemble.store import MANIFEST, Folder
 from procgen.spec.meaning import Change, changes
 from procgen.spec.model import Spec
+from procgen.spec.records import dataclass
 from procgen.terms.given import spec_of
 from procgen.terms.recipe import Recipe, recipes
 

@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
+
+from procgen.spec.records import dataclass
 
 ROOT_12 = 3.4641016151377544
 NEAR = 1e-6  # how far from a value, as a share of its size, a shock may lie that is one

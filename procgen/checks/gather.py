@@ -7,7 +7,7 @@ from __future__ import annotations
 
 from collections import Counter
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import field
 from typing import Any
 
 import numpy as np
@@ -29,6 +29,7 @@ from procgen.checks.sums import Kept, Moments, Powers
 from procgen.checks.tied import TiedSums
 from procgen.checks.together import FAR, NEAR, CrossSums
 from procgen.checks.untied import UntiedSums
+from procgen.spec.records import dataclass
 
 
 @dataclass

@@ -8,13 +8,14 @@ of paths where the state is small (`small`), by matrix products where it is not.
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import field
 
 import numpy as np
 from numpy.typing import NDArray
 
 from procgen.checks.blocks import BLOCK, GROUP
 from procgen.checks.small import MOST, Steps, products
+from procgen.spec.records import dataclass
 
 _CHUNK = 32  # steps taken at once by matrix products, from a multiple of it on
 _KEPT = 16 << 20  # bytes of chunks that are kept

@@ -9,7 +9,6 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterator
-from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -19,6 +18,7 @@ from procgen.checks.blocks import Window, add_lagged
 from procgen.checks.limits import clustering
 from procgen.checks.sums import Powers
 from procgen.checks.verdict import Check
+from procgen.spec.records import dataclass
 
 _MEAN, _VARIANCE = -(np.euler_gamma + math.log(2.0)) / 2.0, math.pi**2 / 8.0  # of log(abs(z)), z normal
 _LEVERAGE = "leverage: sign times next log size"

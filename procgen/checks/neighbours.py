@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterator
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -20,6 +20,7 @@ from procgen.checks.judge import FEW_PATHS
 from procgen.checks.limits import clustering
 from procgen.checks.sums import Powers
 from procgen.checks.verdict import Check
+from procgen.spec.records import dataclass
 from procgen.terms.conditional import FORGOTTEN
 from procgen.theory.firstorder import FirstOrder, Sizes
 from procgen.theory.linear import At

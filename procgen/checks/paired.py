@@ -10,10 +10,11 @@ independently it would have √((var x + var y)/n), so that the pairing saved 1 
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
+
+from procgen.spec.records import dataclass
 
 
 @dataclass(frozen=True)

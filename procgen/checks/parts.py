@@ -13,7 +13,6 @@ import math
 import secrets
 import threading
 from collections.abc import Callable, Iterator, Mapping
-from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -28,6 +27,7 @@ from procgen.ensemble.errors import EnsembleError, Refused
 from procgen.ensemble.manifest import node
 from procgen.ensemble.places import address
 from procgen.ensemble.plan import Block
+from procgen.spec.records import dataclass
 
 WORK = "procgen.checks.parts:gather_chain"
 

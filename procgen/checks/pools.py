@@ -10,7 +10,6 @@ and the shares of steps below quantiles of the law.
 from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass
 from functools import cached_property
 from typing import Any
 
@@ -20,6 +19,7 @@ from numpy.typing import NDArray
 from procgen.checks import rounding
 from procgen.checks.blocks import BLOCK, Window, across, add_products, all_known, compiled, in_one_pass, scratch
 from procgen.checks.slow import Slow, SlowLane, plan_slow
+from procgen.spec.records import dataclass
 from procgen.theory.lumps import atoms_of
 from procgen.theory.verdict import STRICT
 

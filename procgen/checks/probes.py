@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable, Iterator, Sequence
-from dataclasses import dataclass, field
+from dataclasses import field
 from functools import cached_property, partial
 from typing import Any
 
@@ -18,6 +18,7 @@ from procgen.checks import rounding
 from procgen.checks.pools import Pool, noise, plan_pool
 from procgen.checks.saddle import summand
 from procgen.checks.scores import Scores
+from procgen.spec.records import dataclass
 from procgen.theory.lumps import atoms_of, chance_of
 from procgen.theory.mixedlaw import Normal
 

@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import zlib
 from collections import OrderedDict
-from dataclasses import dataclass, field, replace
+from dataclasses import field, replace
 from typing import Any
 
 import numpy as np
@@ -20,6 +20,7 @@ from procgen.checks.kalman import Kalman
 from procgen.checks.scores import Scores
 from procgen.checks.short import soon_forgotten
 from procgen.checks.tied import shock_of
+from procgen.spec.records import dataclass
 from procgen.theory.doubles import Rounding
 
 LARGEST_STATE = 300  # elements of the state up to which a Kalman filter is run

@@ -9,7 +9,7 @@ of its series, its values are formed from the data.
 from __future__ import annotations
 
 from collections.abc import Iterable, Iterator, Mapping
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from itertools import combinations
 from typing import Any
 
@@ -22,6 +22,7 @@ from procgen.checks.probes import SeriesPlan, plan_series
 from procgen.checks.sums import Powers
 from procgen.checks.verdict import Check
 from procgen.checks.words import GAP, TOGETHER
+from procgen.spec.records import dataclass
 from procgen.terms.base import Node, signed
 from procgen.terms.combine import Hidden, Scaled, Sum
 from procgen.terms.recover import sources_below

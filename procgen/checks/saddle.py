@@ -8,7 +8,6 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
-from dataclasses import dataclass
 from functools import cached_property
 from typing import Any
 
@@ -17,6 +16,7 @@ from numpy.typing import NDArray
 
 from procgen.checks import power, tails
 from procgen.checks.judge import Finding
+from procgen.spec.records import dataclass
 
 REACH = 5.0  # standard errors: a sum is not judged where one number alone may carry it that far
 _NODES = 1024

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 from collections import Counter
 from collections.abc import Sequence
-from dataclasses import dataclass, field
+from dataclasses import field
 
 import numpy as np
 from numpy.typing import NDArray
@@ -32,6 +32,7 @@ from procgen.checks.blocks import (
 from procgen.checks.scores import BINS, Scores, cluster_scores
 from procgen.checks.stretches import StretchLane, StretchSums
 from procgen.checks.uniforms import CELLS_OF_SD, bin_counts, pieces, uniforms
+from procgen.spec.records import dataclass
 
 MEMORY_LAGS = (1, 2, 3, 4, 5, 6, 8, 12)
 CLUSTER_LAGS = (1, 2, 3, 5)  # `strips` has both written out

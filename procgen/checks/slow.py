@@ -10,7 +10,6 @@ normals, whose law is exact (see `judge.quadratic`).
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -20,6 +19,7 @@ from procgen.checks import judge
 from procgen.checks.blocks import across
 from procgen.checks.judge import Sample
 from procgen.checks.verdict import Check
+from procgen.spec.records import dataclass
 
 LONGEST = 1 << 13  # steps, the last ones of a series
 BLOCKS = 512  # averages of as many steps each

@@ -10,7 +10,7 @@ in its place. Bernstein (1927) cut dependent sequences so.
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -25,6 +25,7 @@ from procgen.checks.probes import SeriesPlan
 from procgen.checks.rectangles import Blocks
 from procgen.checks.verdict import Check
 from procgen.ensemble.plan import Block
+from procgen.spec.records import dataclass
 from procgen.terms.combine import Sum
 from procgen.terms.graph import Source
 from procgen.terms.recover import sources_below

@@ -9,7 +9,6 @@ in a regime of its own spread show at lags as long as they last.
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -21,6 +20,7 @@ from procgen.checks.limits import clustering, sample_of
 from procgen.checks.log_sizes import LogLane, LogSizes, LogSums, plan_log_sizes
 from procgen.checks.sums import Powers
 from procgen.checks.verdict import Check
+from procgen.spec.records import dataclass
 
 LAGS = (1, 2, 4, 8, 16, 32)  # up to a quarter of the steps
 _ORDER = 4  # a square times a square

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Container, Iterator, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import field
 
 import numpy as np
 from numpy.typing import NDArray
@@ -16,6 +16,7 @@ from procgen.checks.copied import Copied
 from procgen.checks.prints import equal, fingerprint, weights
 from procgen.checks.verdict import Check
 from procgen.checks.words import many, number
+from procgen.spec.records import dataclass
 
 _AT_ONCE = 1 << 14  # sampled values that are looked at together
 _PATHS, _ENOUGH = 16, 1024  # every so manieth path's, where there are so many left

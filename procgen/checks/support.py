@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterator
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 
 from procgen.checks.verdict import Check
 from procgen.checks.words import number
+from procgen.spec.records import dataclass
 from procgen.terms.combine import Exp, Product, Scaled, Sum
 from procgen.terms.gaps import Missing
 from procgen.terms.level import Constant

@@ -5,7 +5,6 @@ from __future__ import annotations
 import math
 from collections import Counter
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -15,6 +14,7 @@ from numpy.typing import ArrayLike, NDArray
 
 from procgen.checks.coverage import Coverage, blind, coverage, title
 from procgen.checks.judge import Finding
+from procgen.spec.records import dataclass
 
 if TYPE_CHECKING:
     from procgen.checks.common import Told

@@ -19,7 +19,7 @@ from procgen.checks import judge, power
 from procgen.checks.judge import FEW_PATHS, Finding, Sample
 from procgen.checks.verdict import Check
 from procgen.checks.words import COSINES, SINES, many
-from procgen.theory.characteristic import characteristic, refusal
+from procgen.theory.characteristic import Characteristic, refusal
 from procgen.theory.unknown import Unknown
 
 LAGS = (1, 2)
@@ -50,15 +50,15 @@ def statistics(plan: Any, deviations: NDArray) -> NDArray:
     return np.column_stack(columns)
 
 
-def stated(plan: Any) -> list[float]:
+def stated(plan: Any, characteristic: Characteristic) -> list[float]:
     """What these are by theory; NaN where no pair of steps is so far apart."""
-    x, sd = plan.theory.expression, np.sqrt(np.maximum(plan.drawn, 0.0))
+    sd = np.sqrt(np.maximum(plan.drawn, 0.0))
     steps, alike = plan.steps.tolist(), plan.theory.stationarity.strict_deviations
     at = _moving(plan)
     first = at[:1] if alike else at
 
     def of(places: tuple[int, ...], u: tuple[float, ...]) -> float:
-        return characteristic(x, [steps[i] for i in places], [f / sd[i] for f, i in zip(u, places, strict=True)]).real
+        return characteristic([steps[i] for i in places], [f / sd[i] for f, i in zip(u, places, strict=True)]).real
 
     out = [float(np.mean([of((i,), (1.0,)) for i in first]))]
     for lag in LAGS:
@@ -68,12 +68,12 @@ def stated(plan: Any) -> list[float]:
     return out
 
 
-def spread(plan: Any, times: float = 1.0) -> tuple[float, float]:
+def spread(plan: Any, characteristic: Characteristic, times: float = 1.0) -> tuple[float, float]:
     """Mean and standard deviation of a path's mean cosine, by theory, of values so many times as wide.
 
     E cos(a) cos(b) is half the sum of E cos(a + b) and E cos(a − b).
     """
-    x, at = plan.theory.expression, _moving(plan)
+    at = _moving(plan)
     u, steps = times / np.sqrt(plan.drawn[at]), plan.steps[at].tolist()
     alike, known = plan.theory.stationarity.strict_deviations, {}
 
@@ -81,9 +81,9 @@ def spread(plan: Any, times: float = 1.0) -> tuple[float, float]:
         key = (0, steps[j] - steps[i]) if alike else (i, j)
         if key not in known:
             places = ([steps[i]], [2.0 * u[i]]) if i == j else ([steps[i], steps[j]], [u[i], u[j]])
-            both = characteristic(x, *places).real
-            apart = 1.0 if i == j else characteristic(x, places[0], [u[i], -u[j]]).real
-            known[key] = (0.5 * (both + apart), characteristic(x, [steps[i]], [u[i]]).real)
+            both = characteristic(*places).real
+            apart = 1.0 if i == j else characteristic(places[0], [u[i], -u[j]]).real
+            known[key] = (0.5 * (both + apart), characteristic([steps[i]], [u[i]]).real)
         return known[key]
 
     n = len(at)
@@ -99,7 +99,8 @@ def wave_checks(plan: Any, samples: list[Sample]) -> Iterator[Check]:
     if samples[0].n < FEW_PATHS:
         return
     try:
-        known, spreads = stated(plan), [spread(plan), spread(plan, _WIDER)]
+        of = Characteristic(plan.theory.expression)
+        known, spreads = stated(plan, of), [spread(plan, of, times) for times in (1.0, _WIDER)]
     except Unknown:  # of very many shocks
         return
     for (what, probe, kind), sample, theory in zip(names, samples, known, strict=True):

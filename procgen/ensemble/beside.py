@@ -8,7 +8,6 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable, Iterator, Sequence
-from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -19,6 +18,7 @@ from procgen.ensemble.ensemble import Blocks, Ensemble
 from procgen.ensemble.part import row_bytes
 from procgen.ensemble.plan import LANES, Block, batches
 from procgen.ensemble.source import remember
+from procgen.spec.records import dataclass
 
 VALUES = 1 << 22  # of one side in memory: 32 MB
 Tick = Callable[[int, int], None]

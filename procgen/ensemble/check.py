@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import field
 from pathlib import Path
 
 import numpy as np
@@ -22,6 +22,7 @@ from procgen.ensemble.plan import Block
 from procgen.ensemble.seal import contradictions, other_than_part, refuse_version
 from procgen.ensemble.source import FACTORY, open_source, read_spec
 from procgen.ensemble.store import MANIFEST, Folder, folder_path
+from procgen.spec.records import dataclass
 
 PLACES = 16  # ranges of paths that are drawn again when all would be too many
 ROWS = 4_000_000  # rows that are drawn again

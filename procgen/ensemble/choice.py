@@ -6,7 +6,7 @@ All of it comes piece by piece, in bounded memory, and in the order of the whole
 from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -18,6 +18,7 @@ from procgen.ensemble.files import scratch
 from procgen.ensemble.forms import Form, form
 from procgen.ensemble.layouts import Layout
 from procgen.ensemble.plan import BUFFER_BYTES, Block, cut
+from procgen.spec.records import dataclass
 from procgen.spec.words import did_you_mean
 
 if TYPE_CHECKING:

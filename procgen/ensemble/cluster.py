@@ -19,12 +19,13 @@ import threading
 import time
 from collections import deque
 from collections.abc import Callable, Iterator, Mapping
-from dataclasses import dataclass, field
+from dataclasses import field
 from typing import Any
 
 from procgen.chance.streams import STREAM_VERSION
 from procgen.ensemble.engines import Work, as_json, function
 from procgen.ensemble.errors import EnsembleError
+from procgen.spec.records import dataclass
 
 LOCAL = "local"
 TRIES = 8  # times that a task is begun again when workers die under it

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping
-from dataclasses import asdict, dataclass, field, replace
+from dataclasses import asdict, field, replace
 from typing import Any
 
 import numpy as np
@@ -11,6 +11,7 @@ import numpy as np
 from procgen.chance import kernel
 from procgen.chance.blocks import CHUNK
 from procgen.ensemble.errors import EnsembleError
+from procgen.spec.records import dataclass
 
 TYPES = {"float64": 8, "float32": 4, "int64": 8}
 EXACT = 2.0**52  # from here on a float64 has no fraction

@@ -156,7 +156,8 @@ def _are_same(some: State, others: State) -> bool:
 
 
 def repays(source: Source, narrow_steps: int, share: int) -> bool:
-    """Whether compiled kernels repay for so many narrow steps, or values of one process."""
+    """Whether compiled kernels repay for so many narrow steps of all series, or values of one process."""
+    narrow_steps *= len(source.columns)
     if (narrow_steps <= LOADING_REPAYS and share <= min(SHARE_REPAYS)) or not kernel.available():
         return False
     kept = kernel.are_kept()

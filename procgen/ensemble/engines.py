@@ -17,18 +17,17 @@ import importlib
 import json
 import os
 import signal
-import subprocess
 import sys
 import threading
 from collections import deque
 from collections.abc import Callable, Iterator, Mapping, Sequence
-from dataclasses import dataclass
 from types import FrameType
 from typing import Any, BinaryIO, Protocol, runtime_checkable
 
 from procgen.ensemble import forked
 from procgen.ensemble.errors import EnsembleError, lacks_memory, system_sentence
 from procgen.ensemble.own import settled
+from procgen.spec.records import dataclass
 
 Progress = Callable[[int, int], None]  # (rows done so far, rows in all)
 Records = list[dict[str, Any]]
@@ -383,6 +382,8 @@ class Helper(threading.Thread):
 
 def _program(inherit: int | None) -> Any:
     """A worker process begun as a program of its own."""
+    import subprocess
+
     return subprocess.Popen(
         [sys.executable, "-P", "-c", "from procgen.ensemble.worker import main; main()"],
         stdin=subprocess.PIPE,

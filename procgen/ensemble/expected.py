@@ -7,7 +7,6 @@ stand beside it, or else drawn again from its spec.
 from __future__ import annotations
 
 import re
-from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
@@ -20,6 +19,7 @@ from procgen.ensemble.seal import refuse_changed, refuse_version
 from procgen.ensemble.source import read_spec
 from procgen.ensemble.store import MANIFEST, Folder
 from procgen.spec.meaning import changes
+from procgen.spec.records import dataclass
 from procgen.terms.recipe import recipes
 
 HEX = re.compile("[0-9a-fA-F]{64}")

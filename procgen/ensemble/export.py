@@ -10,7 +10,6 @@ import contextlib
 import os
 import secrets
 from collections.abc import Callable, Iterator, Mapping, Sequence
-from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
@@ -24,6 +23,7 @@ from procgen.ensemble.layouts import Layout
 from procgen.ensemble.manifest import bytes_text
 from procgen.ensemble.store import named_path
 from procgen.ensemble.targets import TARGETS
+from procgen.spec.records import dataclass
 
 Tick = Callable[[int, int], None]
 

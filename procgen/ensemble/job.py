@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import shutil
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
@@ -24,6 +23,7 @@ from procgen.ensemble.plan import Block, Chain, batches, chains, narrow_steps
 from procgen.ensemble.present import Present
 from procgen.ensemble.source import FACTORY, Source, open_source, remember, revealable
 from procgen.ensemble.store import MANIFEST, Folder, folder_path
+from procgen.spec.records import dataclass
 from procgen.terms.given import spec_of
 from procgen.terms.hands import hands
 

@@ -7,12 +7,13 @@ from __future__ import annotations
 
 from collections import Counter
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import field
 from typing import Any
 
 from procgen.ensemble.columns import Column
 from procgen.ensemble.errors import EnsembleError
 from procgen.ensemble.plan import CELL
+from procgen.spec.records import dataclass
 from procgen.spec.words import did_you_mean
 
 KINDS = ("long", "panel", "nested", "wide")

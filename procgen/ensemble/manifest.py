@@ -7,7 +7,7 @@ import json
 import math
 import platform
 from collections.abc import Iterable, Mapping, Sequence
-from dataclasses import asdict, dataclass, field
+from dataclasses import asdict, field
 from typing import Any
 
 from procgen.ensemble import digest
@@ -16,6 +16,7 @@ from procgen.ensemble.columns import TYPES, Column
 from procgen.ensemble.errors import Damaged
 from procgen.ensemble.layouts import Layout
 from procgen.ensemble.plan import Block
+from procgen.spec.records import dataclass
 from procgen.spec.tree import NAME, show_scalar
 
 FORMAT = 1

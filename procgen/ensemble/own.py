@@ -43,14 +43,14 @@ def settled() -> None:
 
 
 def load_functions() -> None:
-    """Load SciPy's special functions; in a process of ours without NumPy's tests and its compiler of Fortran.
+    """Load SciPy's special functions; in a process of ours without what NumPy has of tests, chance and Fortran.
 
     SciPy copies all that NumPy names, and NumPy loads what is named when it is asked for. What has a value is not
     loaded. The names are free again after that, for whoever does want what they stand for.
     """
     import numpy as np
 
-    spared = [name for name in ("f2py", "testing") if _own and name not in vars(np)]
+    spared = [name for name in ("f2py", "random", "testing") if _own and name not in vars(np)]
     for name in spared:
         setattr(np, name, None)
     import scipy.special  # noqa: F401

@@ -7,7 +7,7 @@ it anywhere. Running it twice, even at once, gives the same files.
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
-from dataclasses import asdict, dataclass, field
+from dataclasses import asdict, field
 from functools import partial
 from typing import Any
 
@@ -23,6 +23,7 @@ from procgen.ensemble.places import place_of
 from procgen.ensemble.plan import Block, Chain, batches, narrow_steps
 from procgen.ensemble.source import FACTORY, Source, open_source
 from procgen.ensemble.store import Folder
+from procgen.spec.records import dataclass
 from procgen.terms.hands import at_hand, behind, done, each, hands
 
 

@@ -7,8 +7,9 @@ draws it with the carried state. No value and no digest depends on any choice ma
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import dataclass
 from itertools import pairwise
+
+from procgen.spec.records import dataclass
 
 LANES = 16  # neighbouring paths that share a stream, hence the finest cut
 CELL = 1024  # paths in one node of the digest

@@ -7,5 +7,5 @@
   (what names point to), `correlated`, `following`, `copulas` and `nearest` for its parts.
 - `model` and `calendar` are what comes out; `zones` and `elapsed` are what the calendar knows.
 - Two specs: `variants` and `places` put other values in, `meaning` says what differs.
-- `words`: what faults share.
+- `words`: what faults share. `records`: dataclasses that cost little to declare, for all rooms.
 """

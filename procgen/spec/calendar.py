@@ -15,7 +15,7 @@ Where the times are listed, steps are at these; before the first and after the l
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from datetime import date, datetime, time, timedelta
 from fractions import Fraction
 from functools import cached_property
@@ -23,6 +23,7 @@ from zoneinfo import ZoneInfo
 
 import numpy as np
 
+from procgen.spec.records import dataclass
 from procgen.spec.units import (
     ABSOLUTE,
     DAY,

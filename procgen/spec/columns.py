@@ -8,7 +8,7 @@ from __future__ import annotations
 
 from collections import Counter
 from collections.abc import Sequence
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from datetime import UTC, datetime, timedelta
 from typing import Any
 from zoneinfo import ZoneInfo
@@ -17,6 +17,7 @@ import numpy as np
 
 from procgen.spec.declare import INVALID, Domain, Parameter, Reals, Schema, Text, Whole, mapping_of, read_each
 from procgen.spec.domains import Reading
+from procgen.spec.records import dataclass
 from procgen.spec.tables import MOST_VALUES, Columns, has_column, has_numbers, read_file
 from procgen.spec.tree import Tree
 from procgen.spec.units import parse_date

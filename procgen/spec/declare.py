@@ -8,7 +8,6 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterable, Sequence
-from dataclasses import dataclass
 from typing import Any
 
 from procgen.spec.domains import (
@@ -29,6 +28,7 @@ from procgen.spec.domains import (
     varies,
 )
 from procgen.spec.model import Frozen
+from procgen.spec.records import dataclass
 from procgen.spec.tree import Tree
 from procgen.spec.varying import VaryingLaw, found_in, tried
 from procgen.spec.words import did_you_mean, nearest, one_of, unknown_key

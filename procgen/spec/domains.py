@@ -7,9 +7,9 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping
-from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any, Protocol
 
+from procgen.spec.records import dataclass
 from procgen.spec.units import length_pattern
 from procgen.spec.words import bounds, did_you_mean, one_of, unquote
 

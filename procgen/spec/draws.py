@@ -4,12 +4,12 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping
-from dataclasses import dataclass
 from typing import Any, ClassVar
 
 from procgen.spec.declare import INVALID, Domain, Parameter, Real, Reals, Schema, mapping, mapping_of, read_parameters
 from procgen.spec.domains import Reading
 from procgen.spec.model import Frozen
+from procgen.spec.records import dataclass
 from procgen.spec.tree import Tree
 from procgen.spec.words import did_you_mean, one_of
 

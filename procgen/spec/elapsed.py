@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
 
 from procgen.spec.calendar import Grid
 from procgen.spec.domains import INVALID, Choice, Reading
+from procgen.spec.records import dataclass
 from procgen.spec.tree import Tree
 
 

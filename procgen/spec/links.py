@@ -3,12 +3,12 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
-from dataclasses import dataclass
 
 from procgen.spec.declare import INVALID
 from procgen.spec.domains import Reading
 from procgen.spec.entries import children, named, walk
 from procgen.spec.model import Entry, Place, Series, Shared
+from procgen.spec.records import dataclass
 from procgen.spec.tree import Tree
 from procgen.spec.words import did_you_mean, one_of
 

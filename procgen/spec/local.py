@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import re
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from datetime import date
 from typing import Any
 
@@ -11,6 +11,7 @@ import numpy as np
 
 from procgen.spec.calendar import Grid
 from procgen.spec.domains import INVALID, Choice, Domain, Reading, Schema, one_or_list
+from procgen.spec.records import dataclass
 from procgen.spec.tree import Tree
 from procgen.spec.units import DAY, parse_date
 

@@ -9,7 +9,7 @@ from __future__ import annotations
 import hashlib
 from collections import Counter
 from collections.abc import Iterator, Mapping
-from dataclasses import dataclass, fields, replace
+from dataclasses import fields, replace
 from itertools import combinations
 from typing import Any
 
@@ -21,6 +21,7 @@ from procgen.spec.entries import children, named, walk
 from procgen.spec.local import DaySet, LocalClock, Part, YearDay
 from procgen.spec.model import Entry, Frozen, Series, Shared, Spec
 from procgen.spec.places import plain_at
+from procgen.spec.records import dataclass
 from procgen.spec.varying import Varying, replaced
 
 LONGEST = 80

@@ -5,8 +5,10 @@ from __future__ import annotations
 import hashlib
 import json
 from collections.abc import Callable, Iterator, Mapping
-from dataclasses import dataclass, field
+from dataclasses import field
 from typing import TYPE_CHECKING, Any
+
+from procgen.spec.records import dataclass
 
 if TYPE_CHECKING:
     from procgen.spec.calendar import Grid

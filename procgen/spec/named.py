@@ -2,12 +2,12 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
 from typing import Any
 
 from procgen.spec.declare import INVALID, Domain, Reading, Reals, Schema, one_or_list
 from procgen.spec.entries import read_name
 from procgen.spec.model import Frozen
+from procgen.spec.records import dataclass
 from procgen.spec.tree import Tree
 
 

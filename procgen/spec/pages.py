@@ -8,10 +8,11 @@ compact protocol.
 from __future__ import annotations
 
 from collections.abc import Collection, Iterator, Sequence
-from dataclasses import dataclass
 from io import SEEK_END, BytesIO
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, BinaryIO
+
+from procgen.spec.records import dataclass
 
 if TYPE_CHECKING:
     import pyarrow as pa

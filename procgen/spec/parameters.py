@@ -8,13 +8,14 @@ series, as `{column: name}` of the group's table.
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Mapping
-from dataclasses import dataclass, field
+from dataclasses import field
 from typing import Any
 
 from procgen.spec.declare import INVALID, Choice, Parameter, Real, read_each
 from procgen.spec.domains import FORMS, Reading
 from procgen.spec.draws import DrawOf, TableDraw
 from procgen.spec.model import Fault, Spec
+from procgen.spec.records import dataclass
 from procgen.spec.tables import TABLE, read_lookup
 from procgen.spec.tree import Tree
 from procgen.spec.varying import PATH, SERIES, Varying, varying_of

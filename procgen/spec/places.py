@@ -9,13 +9,14 @@ from __future__ import annotations
 
 import re
 from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from typing import Any
 
 from procgen.spec.declare import Body, Parameter, Record, Records
 from procgen.spec.domains import varies
 from procgen.spec.entries import ENTRY_KEYS
 from procgen.spec.named import Named
+from procgen.spec.records import dataclass
 from procgen.spec.tree import Tree, step_into
 from procgen.spec.words import nearest, one_of
 

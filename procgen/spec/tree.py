@@ -6,10 +6,11 @@ import datetime
 import math
 import re
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import field
 from typing import Any
 
 from procgen.spec.model import Fault, Place
+from procgen.spec.records import dataclass
 
 MAX_DEPTH = 60
 MAX_NODES = 100_000

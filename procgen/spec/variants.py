@@ -10,12 +10,13 @@ the file. A variant draws by the same names as the spec, hence from the same sho
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping, Sequence
-from dataclasses import dataclass, field, replace
+from dataclasses import field, replace
 from typing import Any
 
 from procgen.spec.entries import read_name
 from procgen.spec.model import Fault, Place, SpecError
 from procgen.spec.places import OUT, Declared, Nowhere, planted, put
+from procgen.spec.records import dataclass
 from procgen.spec.tree import TooMuch, Tree, from_data
 from procgen.spec.words import did_you_mean, one_of
 from procgen.spec.yaml12 import from_text

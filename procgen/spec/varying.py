@@ -3,11 +3,12 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Container, Iterable, Iterator, Mapping
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from itertools import product
 from typing import TYPE_CHECKING, Any
 
 from procgen.spec.model import Entry, Frozen, Series, Shared, Spec
+from procgen.spec.records import dataclass
 
 if TYPE_CHECKING:
     from procgen.spec.draws import DrawLaw

@@ -9,12 +9,12 @@ from __future__ import annotations
 
 import re
 from collections.abc import Iterator
-from dataclasses import dataclass
 from typing import Any
 
 import yaml
 
 from procgen.spec.model import Fault, Place
+from procgen.spec.records import dataclass
 from procgen.spec.tree import HIDDEN, MAX_DEPTH, TooMuch, Tree, check_size, hidden_in, step_into
 from procgen.spec.words import did_you_mean
 

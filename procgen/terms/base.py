@@ -13,13 +13,14 @@ broadcasts. A state is a dict of named arrays; a recursion never changes the sta
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import field
 from typing import Any, ClassVar
 
 import numpy as np
 
 from procgen.chance.laws import Normal
 from procgen.spec.declare import LawOf, Parameter, Real, Reals
+from procgen.spec.records import dataclass
 from procgen.terms.support import EVERYTHING, Support
 
 LEAST_LOG = -708.0  # of what an exponential gives with all its digits

@@ -2,12 +2,12 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
 from threading import local
 
 import numpy as np
 
 from procgen.chance.kernel import is_compiling, kernel
+from procgen.spec.records import dataclass
 from procgen.terms.base import Ahead, Array, State
 
 LONGEST_EXACT = 10_000  # steps: their work grows with the square of them

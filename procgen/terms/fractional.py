@@ -13,7 +13,6 @@ for no more than 10,000 steps.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
 from functools import lru_cache
 from typing import ClassVar
 
@@ -24,6 +23,7 @@ from procgen.chance.kernel import is_compiling, kernel
 from procgen.chance.laws import Normal
 from procgen.chance.portable import exp, log, lost, sin_turns
 from procgen.spec.declare import Choice, Parameter, Real, Reals
+from procgen.spec.records import dataclass
 from procgen.terms.arma import not_causal, recursion
 from procgen.terms.base import SD, TOTAL_SD, Ahead, Draw, Term, number, signed
 from procgen.terms.exact import LONGEST_EXACT, NARROW, Exact, Predictors, added

@@ -7,13 +7,13 @@ normals are correlated form a `Group`, mixed in the order of the spec's `correla
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 
 from procgen.chance.streams import Stream
 from procgen.spec.model import Entry, Fault, Place, Spec, SpecError
+from procgen.spec.records import dataclass
 from procgen.terms import catalogue
 from procgen.terms.base import Node, Term
 from procgen.terms.combine import Hidden, Scaled, Sum

@@ -11,12 +11,14 @@ from collections import deque
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 from contextvars import ContextVar, copy_context
-from dataclasses import dataclass, field
+from dataclasses import field
 from functools import partial
 from queue import SimpleQueue
 from typing import Any, TypeVar
 
 import numpy as np
+
+from procgen.spec.records import dataclass
 
 Item = TypeVar("Item")
 Found = TypeVar("Found")

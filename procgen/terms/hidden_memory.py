@@ -10,11 +10,11 @@ What was seen so long ago that less than a share FORGOTTEN of it is left counts 
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 
+from procgen.spec.records import dataclass
 from procgen.terms.arma import Arma
 from procgen.terms.base import Array, Cell, Node, State, Unknown
 from procgen.terms.combine import Sum

@@ -6,7 +6,6 @@ Everything here makes values: only portable operations (see `procgen.chance.port
 from __future__ import annotations
 
 from collections.abc import Callable, Hashable, Iterator
-from dataclasses import dataclass
 from functools import cached_property
 from itertools import pairwise
 from typing import Any
@@ -18,6 +17,7 @@ from procgen.chance.kernel import is_compiling, machine
 from procgen.chance.laws import Normal
 from procgen.chance.portable import cholesky
 from procgen.spec.model import Fault, Following, SpecError
+from procgen.spec.records import dataclass
 from procgen.terms.base import Array
 from procgen.terms.combine import Scaled
 from procgen.terms.hands import at_hand, each

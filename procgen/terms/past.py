@@ -8,13 +8,14 @@ from __future__ import annotations
 
 from collections import OrderedDict
 from collections.abc import Iterator, Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from typing import Any, NoReturn
 
 import numpy as np
 
 from procgen.spec.entries import walk
 from procgen.spec.model import Entry, Fault, Frozen, Place, Series, Spec, SpecError
+from procgen.spec.records import dataclass
 from procgen.spec.varying import varying_of
 from procgen.terms.base import Array, Node, Unknown
 from procgen.terms.combine import Exp

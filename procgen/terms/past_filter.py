@@ -9,10 +9,9 @@ Everything here makes values: only portable operations (see `procgen.chance.port
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-
 import numpy as np
 
+from procgen.spec.records import dataclass
 from procgen.terms.base import Array
 
 EXACT = 2.0**-40  # of the largest variance of an element: what is left below it is rounding

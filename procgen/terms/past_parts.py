@@ -10,13 +10,14 @@ Everything here makes values: only portable operations (see `procgen.chance.port
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass, field, replace
+from dataclasses import field, replace
 from typing import Any
 
 import numpy as np
 
 from procgen.chance.portable import sum_doubling
 from procgen.spec.model import Entry, Frozen
+from procgen.spec.records import dataclass
 from procgen.terms.arima import Integrated
 from procgen.terms.arma import Arma
 from procgen.terms.base import Array, Node

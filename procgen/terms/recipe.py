@@ -8,12 +8,13 @@ values; where recipes differ, the terms that differ are those that may have move
 from __future__ import annotations
 
 from collections.abc import Hashable, Iterator
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from typing import Any
 
 from procgen.spec.draws import TableDraw
 from procgen.spec.entries import children, walk
 from procgen.spec.model import Entry, Frozen, Spec
+from procgen.spec.records import dataclass
 from procgen.spec.varying import PATH, Varying, replaced
 from procgen.terms import catalogue
 from procgen.terms.graph import Graph, build

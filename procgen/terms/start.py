@@ -12,13 +12,13 @@ Everything here makes values: only portable operations (see `procgen.chance.port
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Sequence
-from dataclasses import dataclass
-from functools import cached_property
+from functools import cached_property, lru_cache
 from typing import Any
 
 import numpy as np
 
 from procgen.chance.portable import cholesky, matmul
+from procgen.spec.records import dataclass
 from procgen.terms.rows import Unlike, plain, row_in
 
 Array = np.ndarray
@@ -151,6 +151,13 @@ def decay_length(a: Array, negligible: float = NEGLIGIBLE) -> int:
     """The smallest n with every entry of |Aⁿ| at most `negligible`, found by doubling and then halving."""
     if a.size == 1:
         return _decay_of_one(float(a[0, 0]), negligible)
+    return _decay_of_many(np.asarray(a, np.float64).tobytes(), len(a), negligible)
+
+
+@lru_cache(maxsize=256)
+def _decay_of_many(entries: bytes, size: int, negligible: float) -> int:
+    """The same of a matrix of several rows; it is asked for every tile, and takes size^3 steps a product."""
+    a = np.frombuffer(entries).reshape(size, size)
     powers = [a]
     while np.max(np.abs(powers[-1])) > negligible:
         if 1 << len(powers) > LONGEST:

@@ -8,7 +8,9 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable, Iterable
-from dataclasses import dataclass, replace
+from dataclasses import replace
+
+from procgen.spec.records import dataclass
 
 MOST = 1024  # values that are kept one by one when supports are combined
 SAME = 1e-9  # of a step: what is as near to a lattice is on it

@@ -8,7 +8,6 @@ over series is that of path 0.
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
-from dataclasses import dataclass
 from functools import cached_property
 from typing import Any
 
@@ -18,6 +17,7 @@ from procgen.chance import draws
 from procgen.chance.streams import Stream
 from procgen.spec.draws import TableDraw
 from procgen.spec.model import Fault, Place, Spec, SpecError
+from procgen.spec.records import dataclass
 from procgen.spec.varying import PATH, SERIES, Varying, fixed, varying_of
 
 ROLE = "parameter"

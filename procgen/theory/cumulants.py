@@ -15,7 +15,7 @@ from procgen.theory.linear import At, Base, Linear
 from procgen.theory.sources import Source, Space
 from procgen.theory.transient import square_products
 from procgen.theory.unknown import Unknown
-from procgen.theory.weights import Sided, over_distinct, weights_at
+from procgen.theory.weights import Sided, over_distinct, sums_of_products, weights_at
 
 SPARSE = 4096  # so many pairs of shocks are added up one by one
 
@@ -33,8 +33,7 @@ def joint_cumulant(source: Source, forms: Sided, t: np.ndarray, s: np.ndarray) -
         steps = [(s if side else t) - delay for delay, (_, side) in zip(delays, forms, strict=True)]
         same = np.all([step == steps[0] for step in steps[1:]], axis=0)
         return float(cumulant) * source.variance ** (order / 2) * _scale(forms) * same
-    sums = over_distinct(forms, t, s, lambda steps: float(np.prod(weights_at(forms, steps), axis=0).sum()))
-    return float(cumulant) * source.variance ** (order / 2) * sums
+    return float(cumulant) * source.variance ** (order / 2) * sums_of_products(forms, t, s)
 
 
 def garch_product(space: Space, source: Source, forms: Sided, t: np.ndarray, s: np.ndarray) -> np.ndarray:

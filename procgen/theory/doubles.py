@@ -7,10 +7,11 @@ stays so where the level is taken away again.
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
+
+from procgen.spec.records import dataclass
 
 LEAST, MOST = 1e-30, 1e30  # standard deviations whose fourth powers, and those of their statistics, doubles hold
 SEEN = 1e-6  # cell over the standard deviation of moves up to which nothing shows in any number of values

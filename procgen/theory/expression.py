@@ -9,12 +9,13 @@ opaque source, whose moments are unknown for a reason, but whose stationarity is
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Mapping, Sequence
-from dataclasses import dataclass, field, replace
+from dataclasses import field, replace
 from itertools import count
 from typing import Any
 
 import numpy as np
 
+from procgen.spec.records import dataclass
 from procgen.theory import known, monomials
 from procgen.theory.known import Known
 from procgen.theory.linear import At, Base, Linear, Sum

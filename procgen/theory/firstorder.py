@@ -2,12 +2,12 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.spec.records import dataclass
 from procgen.theory.perpetuity import Perpetuity, settled
 from procgen.theory.unknown import Unknown
 

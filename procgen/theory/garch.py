@@ -15,13 +15,13 @@ Stationarity: Nelson (1990), Econometric Theory 6, 318-334; Bougerol & Picard (1
 
 from __future__ import annotations
 
-from dataclasses import dataclass
 from functools import cached_property
 from itertools import zip_longest
 from typing import Any
 
 import numpy as np
 
+from procgen.spec.records import dataclass
 from procgen.theory.arma import companion, cross_covariance
 from procgen.theory.averages import average
 from procgen.theory.firstorder import FirstOrder

@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 from scipy.special import log_ndtr, ndtr, ndtri
+
+from procgen.spec.records import dataclass
 
 _LOG_ROOT_2_PI = 0.9189385332046727
 _OTHERS = frozenset({"entropy", "expect", "interval", "median", "moment", "rvs", "stats", "support"})

@@ -18,11 +18,11 @@ leaves to chance, its variance at those steps.
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
 from functools import reduce
 
 import numpy as np
 
+from procgen.spec.records import dataclass
 from procgen.theory.arma import PowerSeries
 from procgen.theory.distributed import Distributed
 from procgen.theory.expression import Expression

@@ -7,11 +7,12 @@ a pattern minus itself one period ago is nothing.
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Mapping
-from dataclasses import dataclass, field, replace
+from dataclasses import field, replace
 from math import lcm
 
 import numpy as np
 
+from procgen.spec.records import dataclass
 from procgen.terms.base import number
 from procgen.theory.unknown import Unknown
 

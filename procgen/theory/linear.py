@@ -24,15 +24,16 @@ so that its seasonal difference is the form again.
 from __future__ import annotations
 
 from collections.abc import Iterable, Iterator, Mapping
-from dataclasses import dataclass
 from math import comb
 from typing import Any, NamedTuple
 
 import numpy as np
 
+from procgen.spec.records import dataclass
 from procgen.theory.sources import Source
 
 FEW = 4096  # so many delays are differenced one by one
+
 
 @dataclass(frozen=True, eq=False)
 class Base:

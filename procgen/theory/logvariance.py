@@ -12,13 +12,13 @@ and E e(t)^2 e(t+k)^2 is that times E z^2 exp(q g) / E exp(q g) at q = beta^(k-1
 
 from __future__ import annotations
 
-from dataclasses import dataclass
 from functools import cached_property, lru_cache
 from itertools import pairwise
 from typing import Any
 
 import numpy as np
 
+from procgen.spec.records import dataclass
 from procgen.theory.copula import is_symmetric
 from procgen.theory.unknown import Unknown
 from procgen.theory.volatility import Volatility

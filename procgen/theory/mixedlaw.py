@@ -3,13 +3,13 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from procgen.chance.laws.mixture import crossed, halved
+from procgen.spec.records import dataclass
 
 
 class MixedLaw:

@@ -3,10 +3,11 @@
 from __future__ import annotations
 
 from collections.abc import Iterable
-from dataclasses import dataclass, field, replace
+from dataclasses import field, replace
 
 import numpy as np
 
+from procgen.spec.records import dataclass
 from procgen.theory import wick
 from procgen.theory.known import Known
 from procgen.theory.linear import At, Linear

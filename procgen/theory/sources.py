@@ -7,11 +7,12 @@ shocks (whose sign is new at each step), and the martingale differences e^2 - h 
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Mapping
-from dataclasses import dataclass, field
+from dataclasses import field
 from typing import Any
 
 import numpy as np
 
+from procgen.spec.records import dataclass
 from procgen.theory.chains import Switching
 from procgen.theory.copula import is_symmetric
 from procgen.theory.ties import NormalTie, StateTie, Tie

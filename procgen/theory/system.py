@@ -11,10 +11,11 @@ as squares.
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, field
+from dataclasses import field
 
 import numpy as np
 
+from procgen.spec.records import dataclass
 from procgen.theory.arma import companion, cross_covariance
 from procgen.theory.linear import At, Base, Frozen, Key, Linear, Season, Sum, base_of, below
 from procgen.theory.sources import Source, Space

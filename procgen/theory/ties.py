@@ -7,13 +7,14 @@ are far out together.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from functools import cached_property, lru_cache
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
+from procgen.spec.records import dataclass
 from procgen.theory.copula import TERMS, hermite_basis, is_symmetric, law_correlation, quantiles_of_normals
 from procgen.theory.unknown import Unknown
 

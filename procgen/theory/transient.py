@@ -8,11 +8,11 @@ after a square (He & Terasvirta 1999, for the same moments in the stationary law
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 
+from procgen.spec.records import dataclass
 from procgen.theory.unknown import Unknown
 
 LONGEST = 2048  # steps

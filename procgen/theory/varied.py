@@ -9,7 +9,7 @@ is the product of their rules.
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Sequence
-from dataclasses import dataclass, field, replace
+from dataclasses import field, replace
 from itertools import product
 from typing import Any
 
@@ -18,6 +18,7 @@ from numpy.typing import NDArray
 
 from procgen.spec.entries import walk
 from procgen.spec.model import Frozen, Series, Shared, Spec
+from procgen.spec.records import dataclass
 from procgen.spec.varying import varying_of
 from procgen.theory.quadrature import exact, rule
 from procgen.theory.unknown import Unknown

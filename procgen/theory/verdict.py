@@ -12,10 +12,11 @@ and its reasons name every term that contributes.
 from __future__ import annotations
 
 from collections.abc import Iterable
-from dataclasses import dataclass, field
+from dataclasses import field
 
 import numpy as np
 
+from procgen.spec.records import dataclass
 from procgen.theory.arma import spectral_radius
 from procgen.theory.expression import Expression
 from procgen.theory.known import Known, said

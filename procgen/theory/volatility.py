@@ -6,12 +6,12 @@ moments of h and of e^2 at two steps, which each family gives as functions of th
 
 from __future__ import annotations
 
-from dataclasses import dataclass
 from functools import cached_property
 from typing import Any
 
 import numpy as np
 
+from procgen.spec.records import dataclass
 from procgen.theory.averages import average
 from procgen.theory.copula import is_symmetric
 from procgen.theory.firstorder import FirstOrder

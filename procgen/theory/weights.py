@@ -34,22 +34,42 @@ def covariance_by_weights(space: Space, x: Linear, y: Linear, t: np.ndarray, s: 
             scale = space.covariance(a, b)
             if scale:
                 parts.append((scale, ((x.only([a]), 0), (y.only([b]), 1))))
-
-    def value(steps: list[int]) -> float:
-        return sum(scale * float(np.prod(weights_at(forms, steps), axis=0).sum()) for scale, forms in parts)
-
-    return over_distinct(((x, 0), (y, 1)), t, s, value)
+    return sum((scale * sums_of_products(forms, t, s) for scale, forms in parts), np.zeros(t.shape))
 
 
 def over_distinct(forms: Sided, t: np.ndarray, s: np.ndarray, value: Callable[[list[int]], float]) -> np.ndarray:
     """A function of two steps at all pairs; it is asked once a lag where only the lag matters."""
     pairs = np.stack([t.ravel(), s.ravel()], axis=1)
-    if all(form.is_plain and all(isinstance(k, At) for k in form) for form, _ in forms):
+    if _by_lag(forms):
         pairs = pairs - pairs.min(axis=1, keepdims=True)
     distinct, where = np.unique(pairs, axis=0, return_inverse=True)
     if len(distinct) > MOST_PAIRS:
         raise Unknown(f"it is added up shock by shock, and not for more than {MOST_PAIRS} pairs of steps at once")
     return np.array([value(steps) for steps in distinct.tolist()])[where.ravel()].reshape(t.shape)
+
+
+def _by_lag(forms: Sided) -> bool:
+    """Whether only the lag between two steps matters."""
+    return all(form.is_plain and all(isinstance(k, At) for k in form) for form, _ in forms)
+
+
+def sums_of_products(forms: Sided, t: np.ndarray, s: np.ndarray) -> np.ndarray:
+    """The sum over shocks of the product of the weights of all forms, at all pairs of steps."""
+    if not (_by_lag(forms) and t.size and {side for _, side in forms} == {0, 1}):
+        return over_distinct(forms, t, s, lambda steps: float(np.prod(weights_at(forms, steps), axis=0).sum()))
+    longest, depth = int(np.abs(t - s).max()), max(_depth(form) for form, _ in forms)
+    if longest + depth > LONGEST:
+        raise Unknown(f"weights on more than {LONGEST} shocks")
+    made = {form: _weights(form, 0, 0, longest + depth + 1) for form, _ in forms}
+    first, second = (np.prod([made[form] for form, side in forms if side == here], axis=0) for here in (0, 1))
+
+    def value(steps: list[int]) -> float:
+        """The later step has so many shocks of its own, and the ones that both have lie as much further back."""
+        lag = steps[0] - steps[1]
+        ahead, behind = (first, second) if lag >= 0 else (second, first)
+        return float(np.dot(ahead[abs(lag) : abs(lag) + depth + 1], behind[: depth + 1]))
+
+    return over_distinct(forms, t, s, value)
 
 
 def weights_at(forms: Sided, steps: list[int]) -> np.ndarray:

@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import field
 from functools import cached_property
 from itertools import combinations, islice
 from typing import Any
 
 import numpy as np
 
+from procgen.spec.records import dataclass
 from procgen.spec.words import did_you_mean
 from procgen.terms.supports import support_of
 from procgen.theory.axis import Axis

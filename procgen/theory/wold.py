@@ -16,11 +16,11 @@ from __future__ import annotations
 
 from collections import Counter
 from collections.abc import Iterator
-from dataclasses import dataclass
 from functools import lru_cache, reduce
 
 import numpy as np
 
+from procgen.spec.records import dataclass
 from procgen.theory.arma import polynomial
 from procgen.theory.covariance import convolved
 from procgen.theory.linear import At, Frozen, Key, Linear, Sum, base_of

@@ -9,6 +9,7 @@ from scipy import stats
 
 from procgen.checks import waves
 from procgen.checks.planning import plan_of
+from procgen.theory.characteristic import Characteristic
 from tests.studies.departures import draw, spec_of, verdict
 
 T4 = {"student_t": {"df": 4}}
@@ -56,11 +57,11 @@ def test_what_is_stated_is_the_mean_of_what_is_measured(stated):
     """Over 200 × 1,000 true paths; each statistic within 5.5 standard errors (4e-8)."""
     plan = plan_of(spec_of(stated, 1000, STEPS, 1)).series[0]
     x = np.concatenate([draw(spec_of(stated, 1000, STEPS, seed))["x"][:, plan.steps] for seed in range(100, 120)])
-    found = waves.statistics(plan, x - plan.mean)
+    found, of = waves.statistics(plan, x - plan.mean), Characteristic(plan.theory.expression)
     error = found.std(axis=0) / np.sqrt(len(found))
-    assert (np.abs(found.mean(axis=0) - waves.stated(plan)) < 5.5 * error).all()
-    mean, sd = waves.spread(plan)
-    assert mean == pytest.approx(waves.stated(plan)[0], abs=1e-9)
+    assert (np.abs(found.mean(axis=0) - waves.stated(plan, of)) < 5.5 * error).all()
+    mean, sd = waves.spread(plan, of)
+    assert mean == pytest.approx(waves.stated(plan, of)[0], abs=1e-9)
     cosines = found[:, 0] - mean
     assert abs(np.mean(cosines**2) - sd**2) < 5.5 * np.std(cosines**2) / np.sqrt(len(found))
 

@@ -79,14 +79,14 @@ from procgen.ensemble import own
 {claim}
 own.load_functions()
 import numpy, scipy.special
-print("numpy.f2py" in sys.modules)
+print(*[name for name in ("numpy.f2py", "numpy.random") if name in sys.modules], sep=",")
 import numpy.f2py
-print(numpy.testing.assert_equal.__name__, numpy.f2py.__name__, scipy.special.ndtr(0.0))
+print(numpy.testing.assert_equal.__name__, numpy.f2py.__name__, numpy.random.__name__, scipy.special.ndtr(0.0))
 """
 
 
 @pytest.mark.parametrize("claim", ["own.claim()", ""])
 def test_scipys_functions_come_without_what_they_never_use_and_all_of_numpy_is_there(claim):
     loaded, names, _ = said(FUNCTIONS.format(claim=claim))
-    assert names == "assert_equal numpy.f2py 0.5"
-    assert claim == "" or loaded == "False"
+    assert names == "assert_equal numpy.f2py numpy.random 0.5"
+    assert claim == "" or loaded == ""

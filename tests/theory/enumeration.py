@@ -8,7 +8,6 @@ an expectation. No theory is in it, and no sampling.
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
 from typing import ClassVar
 
 import numpy as np
@@ -19,6 +18,7 @@ from procgen.chance.laws import LAWS
 from procgen.chance.laws.base import Law
 from procgen.chance.streams import Stream
 from procgen.spec.reader import read_text
+from procgen.spec.records import dataclass
 from procgen.terms import catalogue
 from procgen.terms.graph import Graph, build
 

@@ -205,6 +205,19 @@ def test_skewed_shocks_have_a_third_moment(axis):
     assert square.variance(3) == pytest.approx(6 + 3 - 1)
 
 
+def test_a_skewed_filter_looks_forward_otherwise_than_back(axis):
+    """E x(t)^2 y(t + h) = k sum over shocks of the weights' products (Brillinger 1975): of AR(1)s with coefficients
+    a and b, k b^h / (1 - a^2 b) for h >= 0 and k a^(2|h|) / (1 - a^2 b) before."""
+    source = axis.source("x.ar", EXPONENTIAL, 1.0)
+    x, y = axis.filtered(source, (0.8,)), axis.filtered(source, (0.5,))
+    cross = CrossTheory(SeriesTheory("q", axis.product((x, x))), SeriesTheory("y", y))
+    h = np.arange(-6, 7)
+    exact = 2.0 * np.where(h >= 0, 0.5 ** np.abs(h), 0.64 ** np.abs(h)) / (1 - 0.64 * 0.5)
+    np.testing.assert_allclose(cross.covariance(50, 50 + h), exact, rtol=1e-9)
+    three = SeriesTheory("three", axis.product((x, x, x)))
+    assert three.mean(9) == pytest.approx(2.0 / (1 - 0.8**3), rel=1e-9)
+
+
 def test_unknown_has_a_reason(axis):
     x = axis.source("x.t", student(5), 1.0)
     e = SeriesTheory("e", x.exp())

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
-from dataclasses import dataclass, fields
+from dataclasses import fields
 from functools import lru_cache
 from itertools import pairwise
 from typing import TYPE_CHECKING, Any, ClassVar, cast
@@ -16,6 +16,7 @@ from procgen.chance.blocks import Scratch, blockwise
 from procgen.chance.elementary import exp
 from procgen.chance.normal import normal_tail_of
 from procgen.spec.declare import Parameter, Real
+from procgen.spec.records import dataclass
 
 if TYPE_CHECKING:
     from procgen.chance.laws.points import Points

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping
-from dataclasses import dataclass
 from functools import lru_cache
 from typing import Any, ClassVar
 
@@ -14,6 +13,7 @@ from procgen.chance.blocks import Scratch
 from procgen.chance.laws.base import Law
 from procgen.chance.laws.mixture import Normals
 from procgen.spec.declare import Parameter, Real, Records
+from procgen.spec.records import dataclass
 
 _MOST = 16
 _WEIGHT = Parameter("weight", "w", Real(at_least=1e-6, at_most=1e6), "its share, relative to the others")

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
-from dataclasses import dataclass
 from functools import cached_property, lru_cache
 from itertools import pairwise
 from typing import Any, ClassVar
@@ -20,6 +19,7 @@ from procgen.chance.laws.points import Points
 from procgen.chance.normal import normal_tail
 from procgen.chance.tabulated import Tabulated, folded
 from procgen.spec.declare import Parameter
+from procgen.spec.records import dataclass
 from procgen.spec.sample import Sample, Smoothing
 
 _FURTHEST = 13.0  # bandwidths: the normal area beyond is 6e-39

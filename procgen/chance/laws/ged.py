@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
 from functools import lru_cache
 from typing import Any, ClassVar
 
@@ -16,6 +15,7 @@ from procgen.chance.gamma import log_gamma
 from procgen.chance.inversion import Inverse
 from procgen.chance.laws.base import Law
 from procgen.spec.declare import Parameter, Real
+from procgen.spec.records import dataclass
 
 _FARTHEST = 80.0  # the density of the logarithm falls like exp(w) below, and exp(-80) is 1e-35
 

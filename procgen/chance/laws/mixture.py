@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
-from dataclasses import dataclass
 from functools import lru_cache
 from typing import Any, ClassVar
 
@@ -16,6 +15,7 @@ from procgen.chance.elementary import exp
 from procgen.chance.inversion import Inverse
 from procgen.chance.laws.base import Law
 from procgen.spec.declare import Parameter, Real
+from procgen.spec.records import dataclass
 
 _FURTHEST = 13.0  # standard deviations: the normal area beyond is 6e-39
 _MARKS = (-12, -8, -6, -4, -2, 0, 2, 4, 6, 8, 12)

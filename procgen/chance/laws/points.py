@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
 from typing import Any, ClassVar
 
 import numpy as np
@@ -11,6 +10,7 @@ import numpy as np
 from procgen.chance.blocks import Scratch
 from procgen.chance.laws.base import Law
 from procgen.spec.declare import Parameter, Real
+from procgen.spec.records import dataclass
 
 _SAME = 1e-9  # values that are closer than this share of the largest count as one
 

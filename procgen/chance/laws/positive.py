@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
 from functools import lru_cache
 from itertools import pairwise
 from typing import Any, ClassVar
@@ -17,6 +16,7 @@ from procgen.chance.inversion import Inverse
 from procgen.chance.laws.base import Law
 from procgen.chance.normal import normal_quantile
 from procgen.spec.declare import Parameter, Real
+from procgen.spec.records import dataclass
 
 
 @dataclass(frozen=True)

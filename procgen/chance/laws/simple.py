@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
 from typing import Any, ClassVar
 
 import numpy as np
@@ -13,6 +12,7 @@ from procgen.chance.elementary import log_of
 from procgen.chance.kernel import is_compiling
 from procgen.chance.laws.base import Law
 from procgen.chance.normal import normal_quantile
+from procgen.spec.records import dataclass
 
 _ROOT_HALF = 0.7071067811865476
 _ROOT_3 = 1.7320508075688772

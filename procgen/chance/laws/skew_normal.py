@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
 from functools import lru_cache
 from typing import Any, ClassVar
 
@@ -16,6 +15,7 @@ from procgen.chance.inversion import Inverse
 from procgen.chance.laws.base import Law
 from procgen.chance.normal import normal_tail
 from procgen.spec.declare import Parameter, Real
+from procgen.spec.records import dataclass
 
 _ROOT_2_PER_PI = 0.7978845608028654
 _FURTHEST = 13.0  # standard deviations: the normal area beyond is 6e-39

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
 from functools import lru_cache
 from typing import Any, ClassVar
 
@@ -14,6 +13,7 @@ from procgen.chance.gamma import half_step
 from procgen.chance.laws.base import Law
 from procgen.chance.laws.student import StudentT
 from procgen.spec.declare import Parameter, Real
+from procgen.spec.records import dataclass
 
 _ROOT_PI = 1.7724538509055159
 

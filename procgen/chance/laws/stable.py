@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
 from functools import cached_property, lru_cache
 from typing import Any, ClassVar
 
@@ -15,6 +14,7 @@ from procgen.chance.inversion import Inverse
 from procgen.chance.laws.base import Law
 from procgen.chance.tabulated import Tabulated, folded
 from procgen.spec.declare import Parameter, Real
+from procgen.spec.records import dataclass
 
 _NEAR_ONE = 0.05  # nearer to 1 the tables take tens of thousands of panels
 _FAR = 90.0  # exp(-90) is 1e-39

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
 from functools import lru_cache
 from typing import Any, ClassVar
 
@@ -15,6 +14,7 @@ from procgen.chance.elementary import exp, log1p
 from procgen.chance.inversion import Inverse
 from procgen.chance.laws.base import Law
 from procgen.spec.declare import Parameter, Real
+from procgen.spec.records import dataclass
 
 
 @dataclass(frozen=True)

@@ -7,10 +7,12 @@ Every mark has a role, which says what it shows: "stated" (theory), "seen" (summ
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, field
+from dataclasses import field
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
+
+from procgen.spec.records import dataclass
 
 
 @dataclass(frozen=True)

@@ -3,13 +3,13 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping, Sequence
-from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 from procgen.report.pictures import between, fans, laws, memory, seasons
 from procgen.report.pictures.chart import Chart
 from procgen.report.pictures.sample import Sample, of_ensemble, of_origin, of_spec
 from procgen.report.pictures.subject import Subject, subjects
+from procgen.spec.records import dataclass
 
 if TYPE_CHECKING:
     from procgen.checks.verdict import Verdict

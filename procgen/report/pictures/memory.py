@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -13,6 +12,7 @@ from procgen.report.pictures.seen import ENOUGH, across, correlogram
 from procgen.report.pictures.stated import fisher
 from procgen.report.pictures.subject import Subject, share, texts
 from procgen.report.pictures.ticks import axis
+from procgen.spec.records import dataclass
 
 LAGS, MOST_LAGS = 40, 120
 

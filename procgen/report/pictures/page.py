@@ -3,13 +3,13 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass
 from typing import Any
 
 from procgen.report.pictures.chart import Chart
 from procgen.report.pictures.gallery import Gallery, Section
 from procgen.report.pictures.safe import breakable, escaped, short
 from procgen.report.pictures.svg import figure
+from procgen.spec.records import dataclass
 
 WIDTH = 92  # letters of a line of an equation
 MOST_TEXT = 60_000  # letters of a spec that are shown: one may hold tables

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -14,6 +14,7 @@ from procgen.report.pictures.chart import Axis, Band, Chart, Dots, Line, Mark
 from procgen.report.pictures.seen import ENOUGH, NORMAL
 from procgen.report.pictures.subject import Subject, share, texts
 from procgen.report.pictures.ticks import axis, step_axis
+from procgen.spec.records import dataclass
 
 MOST = 48  # points of a season; of a longer one, neighbouring phases are taken together
 LEVEL = 0.2  # share of a standard deviation that its axis spans at least: what is level is to look so

@@ -6,10 +6,11 @@ Arrays are (paths, steps) float64; NaN counts as missing.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
+
+from procgen.spec.records import dataclass
 
 ENOUGH = 20  # paths from which their own spread tells the error of an average over them
 NORMAL = 1.959963984540054  # 97.5 % quantile

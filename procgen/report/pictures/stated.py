@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -11,6 +10,7 @@ from numpy.typing import NDArray
 
 from procgen.report.pictures.ends import FREE, Ends
 from procgen.report.pictures.seen import ENOUGH, NORMAL
+from procgen.spec.records import dataclass
 from procgen.theory.mixedseries import MixedSeries
 from procgen.theory.sources import IID
 from procgen.theory.verdict import STRICT

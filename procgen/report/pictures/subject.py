@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
 from functools import cached_property
 from typing import Any
 
@@ -14,6 +13,7 @@ from procgen.report.pictures.ends import ends
 from procgen.report.pictures.sample import Sample
 from procgen.report.pictures.seen import deviations
 from procgen.report.pictures.stated import Stated
+from procgen.spec.records import dataclass
 
 LEVELS = (0.05, 0.25, 0.5, 0.75, 0.95)
 
