@@ -63,6 +63,7 @@ class Route:
     source: Any = None
     watched: tuple[str, ...] = ()  # events with a known chance that are counted on the way
     ranked: float | None = None  # the grain, which ranks take in exactly, where ranks given the past stand for shocks
+    strayed: float = 0.0  # how far rounding has brought whole numbers behind the series from what they are, at most
     hidden: bool = False  # whether these ranks follow states that are not seen
     few: Few | None = None  # how shocks of a law of few values are told apart; what comes out are then ranks
     forgotten: float | None = None  # share of an unknown first variance that may be left in the shocks
@@ -79,7 +80,7 @@ class Route:
         from procgen.checks.undo import undone
 
         if self.ranked is not None:
-            return ranked(self.graph, self.series, self.theory, self.ranked)
+            return ranked(self.graph, self.series, self.theory, self.ranked, self.strayed)
         return undone(self.graph, self.series, self.theory, first_path, paths, self.forgotten)
 
     def tile(
@@ -180,7 +181,7 @@ def route(
     and steps, where few steps are to be made the most of.
     """
     from procgen.chance.laws import LAWS
-    from procgen.checks.special import ranked
+    from procgen.checks.special import ranked, strayed
     from procgen.terms.base import Unknown
     from procgen.terms.hidden_states import HiddenStates
     from procgen.terms.ranks import Ranking
@@ -197,12 +198,13 @@ def route(
     if states <= (LARGEST_STATE if not undone else SMALL_STATE):
         return _by_filter(name, theory, graph, grain, system)
     if isinstance(undone, Unknown):
-        ranks = ranked(graph, name, theory, grain)
+        off = strayed(graph, name, theory, grain, size[1])
+        ranks = ranked(graph, name, theory, grain, off)
         if isinstance(ranks, Ranking):
             words = f"ranks of {name} given its past"
             term = ranks.node.term
             way = Route(name, Scores(LAWS["uniform"]()), words, theory, graph, 0.0, ranked=grain, watched=term.watched)
-            return replace(way, hidden=isinstance(term, HiddenStates))
+            return replace(way, strayed=off, hidden=isinstance(term, HiddenStates))
         return _by_projection(name, theory, graph, grain, undone.reason if ranks is None else ranks.reason)
     words = f"recovered by undoing {name} down to {undone.source.name}"
     blurred = any(node.term.blurs for node in undone.nodes)

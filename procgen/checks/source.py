@@ -92,7 +92,7 @@ class EnsembleOrigin:
     def __init__(self, ensemble: Any, spec: Any = None):
         self.ensemble = ensemble
         self.spec = ensemble.spec if spec is None else spec
-        self.spec_file = self.spec.file
+        self.spec_file, self.spec_digest = self.spec.file, self.spec.digest()
         self.same_draws = same_draws(ensemble.spec, self.spec)
         self.steps, self.rows = ensemble.whole.steps, ensemble.whole.rows
         self.faults: list[Check] = []
@@ -116,7 +116,7 @@ class EnsembleOrigin:
             "paths": whole.paths,
             "steps": whole.steps,
             "digest": manifest.digest if manifest is not None else None,
-            "spec_digest": self.spec.digest(),
+            "spec_digest": self.spec_digest,
             "where": str(self.ensemble.path) if manifest is not None else None,
             "spec_file": self.spec_file,
             "judged_on": "; ".join(sizes.told(whole.paths, whole.steps, self.spec)),

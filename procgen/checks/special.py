@@ -33,19 +33,28 @@ def lumpy(theory: Any) -> bool:
     return bool(theory.discrete or getattr(theory, "lumpy", False))
 
 
-def ranked(graph: Any, series: str, theory: Any, grain: float) -> Ranking | Unknown | None:
-    """A way to the ranks of a series given its past; why there is none, or None where no term has ranks."""
+def strayed(graph: Any, series: str, theory: Any, grain: float, steps: int) -> float:
+    """How far from whole numbers stored values are where they are undone; infinite where that cannot be told."""
+    if not grain or getattr(theory, "mixture", None) is not None:
+        return 0.0
+    way = ranking(graph, series, theory.discrete, grain)
+    return way.strayed(steps) if isinstance(way, Ranking) and not way.plain else 0.0
+
+
+def ranked(graph: Any, series: str, theory: Any, grain: float, off: float = math.inf) -> Ranking | Unknown | None:
+    """A way to the ranks of a series given its past; why there is none, or None where no term has ranks.
+
+    off: how far whole numbers have `strayed`.
+    """
     if getattr(theory, "mixture", None) is not None:
         return None
     way = ranking(graph, series, theory.discrete, grain)
-    if isinstance(way, Ranking) and grain and not way.plain:
+    if isinstance(way, Ranking) and grain and not way.plain and not way.told_apart(off):
         return Unknown(f"values of {series} are rounded after they were changed: what lies behind them is not known")
     return way
 
 
-def whole_numbers(
-    series: str, probe: str, law: Any, x: NDArray, seed: int, grain: float = 0.0
-) -> Iterator[Check]:
+def whole_numbers(series: str, probe: str, law: Any, x: NDArray, seed: int, grain: float = 0.0) -> Iterator[Check]:
     """A law of whole numbers (or of few values) at a probe: ranks spread over their steps, and the least.
 
     law: of the values x, with `spacing`, `cdf` and `ppf`. grain: the distance of neighbouring values as stored, or 0.

@@ -12,16 +12,19 @@ from typing import Any
 import numpy as np
 
 from procgen.terms.base import Array, Node, Unknown
-from procgen.terms.combine import Exp, Hidden
+from procgen.terms.combine import Exp, Hidden, Product, Scaled, Sum, Use
 from procgen.terms.graph import Graph, Source
 from procgen.terms.hidden_memory import hidden_memory
 from procgen.terms.hidden_states import hidden_states
-from procgen.terms.operators import Integrate
+from procgen.terms.operators import Integrate, Lag
 from procgen.terms.recover import KnownParts, sources_below
 
 ROOT_12 = 3.4641016151377544
 ROUNDING = 8.0 * np.finfo(float).eps  # of the numbers that values are undone through
 OFF = 1e-6  # how far from a whole number a value may lie that is one
+_APART = 0.1  # how far rounding may bring values from whole numbers that are still told apart, with room for large ones
+_STRAIGHT = (Sum, Scaled, Product, Use, Lag, Integrate)  # rounding goes through these as through a straight line
+_TILE = 4096  # steps
 
 
 def ranking(graph: Graph, series: str, whole: bool, grain: float) -> Ranking | Unknown | None:
@@ -118,6 +121,7 @@ class Ranking:
         self._steps = [*chain, (node, -1)]
         self._states: list[Any] = [None] * len(self._steps)
         self._step = 0
+        self._off = 0.0
         self.seen: Any = ()  # of the last tile: events that the term watches, and their chances
         beside = [part for at, i in self._steps for k, part in enumerate(at.inputs) if k != i]
         self._sure = [part for part in beside if not sources_below(graph, part)]
@@ -132,25 +136,56 @@ class Ranking:
         """Standardised uniforms (steps, paths) of the next steps' values, by uniforms `v`; NaN where not known."""
         at = np.arange(self._step, self._step + len(values))
         known = self._known.rows(len(values)) if self._known else {}
+        undone = self._through(values, known, at)
+        if isinstance(undone, Unknown):
+            return undone
+        values, size = undone
+        values = self._on_piles(values, ROUNDING * size)
+        told = values, self._cell(values), [known.get(id(part)) for part in self.node.inputs], self._states[-1], at
+        lost = np.isnan(values)
+        self.seen = [(happened, np.where(lost, np.nan, p)) for happened, p in self.node.term.events(*told)]
+        answer = self.node.term.rank(*told)
+        if isinstance(answer, Unknown):
+            return answer
+        ends, self._states[-1] = answer
+        self._step += len(at)
+        below, upto = (np.where(lost, np.nan, end) for end in ends)
+        return ROOT_12 * (below + v * (upto - below) - 0.5)
+
+    def _through(self, values: Array, known: dict[int, Any], at: Array) -> tuple[Array, Array] | Unknown:
+        """The values of the term behind those of the series, and the size of the numbers that they come through."""
         size = np.abs(values)
-        for k, (node, random) in enumerate(self._steps):
+        for k, (node, random) in enumerate(self._steps[:-1]):
             beside = [None if i == random else known.get(id(part)) for i, part in enumerate(node.inputs)]
-            if node is self.node:
-                values = self._on_piles(values, ROUNDING * size)
-                told = values, self._cell(values), beside, self._states[k], at
-                lost = np.isnan(values)
-                self.seen = [(happened, np.where(lost, np.nan, p)) for happened, p in node.term.events(*told)]
-                answer = node.term.rank(*told)
-            else:
-                answer = node.term.invert(values, beside, self._states[k], at)
+            answer = node.term.invert(values, beside, self._states[k], at)
             if isinstance(answer, Unknown):
                 return answer
-            if node is not self.node:
-                size = _passed(size, node, [rows for rows in beside if rows is not None], answer[0])
+            size = _passed(size, node, [rows for rows in beside if rows is not None], answer[0])
             values, self._states[k] = answer
-        self._step += len(at)
-        below, upto = (np.where(lost, np.nan, end) for end in values)
-        return ROOT_12 * (below + v * (upto - below) - 0.5)
+        return values, size
+
+    def strayed(self, steps: int) -> float:
+        """How far from whole numbers rounding brings what is undone, at most; infinite where that cannot be told.
+
+        For a Ranking from step 0 on, which is of no further use then.
+        """
+        if not steps or not self._whole or not all(isinstance(over.term, _STRAIGHT) for over, _ in self._steps[:-1]):
+            return np.inf
+        most = 0.0
+        for first in range(0, steps, _TILE):
+            at = np.arange(first, min(first + _TILE, steps))
+            rows = 0.5 * self._grain * np.column_stack([0.0 * at, 1.0 - 2.0 * (at % 2)])  # a sum's steps at their worst
+            undone = self._through(rows, self._known.rows(len(at)) if self._known else {}, at)
+            if isinstance(undone, Unknown):
+                return np.inf
+            moved = np.abs(undone[0][:, 1] - undone[0][:, 0])
+            most = max(most, float(np.max(np.nan_to_num(moved, nan=0.0, posinf=np.inf))))
+        return most
+
+    def told_apart(self, strayed: float) -> bool:
+        """Whether whole numbers that have strayed so far by rounding are known; from now on they are taken for that."""
+        self._off = 4.0 * strayed
+        return strayed <= _APART
 
     def _on_piles(self, values: Array, error: Array) -> Array:
         """Values that are within what undoing has rounded of one with a chance of its own, on it."""
@@ -162,7 +197,7 @@ class Ranking:
         """What is stored as these values: a cell of the rounding, or the value alone."""
         if self._whole:
             near = np.rint(values)
-            near = np.where(np.abs(values - near) <= OFF * np.maximum(1.0, np.abs(near)), near, np.nan)
+            near = np.where(np.abs(values - near) <= self._off + OFF * np.maximum(1.0, np.abs(near)), near, np.nan)
             return near - 0.5, near + 0.5
         half = self._grain / 2.0
         return (values - half, values + half) if half else (np.nextafter(values, -np.inf), values)

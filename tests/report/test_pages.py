@@ -267,7 +267,8 @@ def test_an_ensemble_is_shown_against_the_spec_that_it_was_held_against():
     page = self_contained(verdict_page(pg.validate(found, other)))
     said = " ".join(page.text)
     assert "x[t] = 9" in said and "x[t] = 5" not in said
-    assert other.digest() in said and found.spec.digest() not in said
+    assert f"SHA-256 of the spec that they are held against {other.digest()}" in said
+    assert said.count(found.spec.digest()) == said.count(f"they were drawn from {found.spec.digest()}") == 1
     assert page.seen.count("nav") == 0 and "x__ar" not in "".join(page.ids)  # a revealed term is no series
 
 

@@ -219,6 +219,26 @@ def test_a_page_of_the_same_data_is_the_same_on_another_day(out):
     assert named.replace("Judged on 2027-01-04:", "Judged:") == verdict_page(verdict)
 
 
+def test_the_seed_of_a_report_is_that_of_the_data_whichever_spec_they_are_held_against(out):
+    ours = pg.open_ensemble(out).spec
+    other = ours.set({"seed": ours.seed + 92})
+    text = verdict_page(pg.validate(out, other))
+    assert f"<dt>seed</dt><dd>{ours.seed}, of the spec that the values were drawn from, which is another</dd>" in text
+    assert f"<dt>SHA-256 of the spec that they are held against</dt><dd>{other.digest()}</dd>" in text
+    assert f"<dt>SHA-256 of the spec that they were drawn from</dt><dd>{ours.digest()}</dd>" in text
+    assert "<dt>SHA-256 of the spec</dt>" not in text
+    own = verdict_page(pg.validate(out, ours))
+    assert (
+        f"<dt>seed</dt><dd>{ours.seed}</dd>" in own and f"<dt>SHA-256 of the spec</dt><dd>{ours.digest()}</dd>" in own
+    )
+
+
+def test_the_spec_of_a_verdict_is_the_one_that_was_given_though_parts_are_revealed():
+    spec = pg.load(PUMP)
+    ensemble = pg.render(spec, paths=20, steps=40, reveal="all")  # whose spec has that many paths and steps
+    assert pg.validate(ensemble, spec, false_alarm=1e-8).about["spec_digest"] == spec.digest()
+
+
 def test_a_report_on_a_foreign_file_tells_its_bytes_and_no_seed(tmp_path):
     """The digest is what coreutils' sha256sum says; a table in memory has none, and neither has a seed."""
     table = pg.render(pg.load(PUMP), paths=20, steps=40).to_pandas()

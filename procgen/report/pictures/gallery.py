@@ -120,8 +120,15 @@ def _record_of_table(table: Any) -> list[tuple[str, str]]:
 
 
 def _record_of_data(ensemble: Any, spec: Any) -> list[tuple[str, str]]:
-    out = _record(spec)
+    """Of an ensemble of ours: its seed is that of the spec it was drawn from, whichever it is held against."""
+    out = _record(ensemble.spec)
     manifest = getattr(ensemble, "manifest", None)
+    if spec.digest() != ensemble.spec.digest():
+        out[0] = ("seed", f"{ensemble.spec.seed}, of the spec that the values were drawn from, which is another")
+        out[2:3] = [
+            ("SHA-256 of the spec that they are held against", spec.digest()),
+            ("SHA-256 of the spec that they were drawn from", ensemble.spec.digest()),
+        ]
     if manifest is not None:
         out.insert(0, ("ensemble", str(ensemble.path)))
         out.append(("SHA-256 of the values", manifest.digest))
