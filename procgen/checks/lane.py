@@ -25,7 +25,7 @@ from procgen.checks.rectangles import Blocks, Values, first_values
 from procgen.checks.relations import RelationLane
 from procgen.checks.start import Early
 from procgen.checks.tree import Tree, ranges
-from procgen.ensemble.plan import Block
+from procgen.ensemble.plan import STEPS, Block
 
 TILE = 1 << 18  # values of one series in a tile: with fewer, calls cost more than what passes through the caches
 STRIP = 64  # paths that are turned together
@@ -67,7 +67,8 @@ class Lane:
     def __init__(self, plan: Plan, first_path: int, paths: int):
         self.plan, self.first_path, self.paths, self.step = plan, first_path, paths, 0
         self.sums = Gather(plan)
-        self.height = max(TILE // paths // BLOCK, 1) * BLOCK
+        # Parts are cut at multiples of STEPS: so tiles end at the same steps wherever that is.
+        self.height = min(1 << (max(TILE // paths, BLOCK).bit_length() - 1), STEPS)
         self.rest: dict[str, NDArray] = {}  # steps behind the last multiple of 64
         self.probes = np.full((paths, plan.offset[-1]), np.nan)
         self.pools = [PoolLane(p.pool, paths) if p.pool else None for p in plan.series]

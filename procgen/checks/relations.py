@@ -10,7 +10,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import replace
-from itertools import combinations
+from itertools import chain, combinations
 from typing import Any
 
 import numpy as np
@@ -85,10 +85,10 @@ def plan_relations(
     `apart`: pairs of series whose shocks cannot be compared. Series that do not wander themselves have no gap.
     """
     found: list[Relation] = []
-    candidates = [(weights, True) for weights in _candidates(graph)]
+    gaps = ((weights, True) for weights in _candidates(graph))
     sds: dict[str, float | None] = {}
-    candidates += [(weights, False) for pair in apart if (weights := _together(theory, *pair, steps, sds)) is not None]
-    for weights, gap in candidates:
+    sums = ((weights, False) for pair in apart if (weights := _together(theory, *pair, steps, sds)) is not None)
+    for weights, gap in chain(gaps, sums):  # of many pairs most are never asked for
         if len(found) == MOST:
             break
         combined = _combined(theory, weights)
