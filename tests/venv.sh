@@ -17,5 +17,8 @@ done
 
 echo "Installing into .venv${extra:+ with the extra \"$extra\"} ..." >&2
 if [ ! -x .venv/bin/python ]; then "$python" -m venv .venv; fi
-.venv/bin/python -m pip install --quiet --disable-pip-version-check -e ".${extra:+[$extra]}"
+.venv/bin/python -m pip install --quiet --disable-pip-version-check --no-compile -e ".${extra:+[$extra]}"
+# pip compiles on one processor, and tests of others and tools that are never imported too, in three times as long
+.venv/bin/python -m compileall -qq -j 0 -x '/(tests|pip|setuptools|pkg_resources|mypyc?|moto|pygments)/' \
+    .venv/lib/python3*/site-packages || :  # what does not compile is told by whoever imports it
 cp pyproject.toml "$stamp"
