@@ -21,6 +21,7 @@ _CHUNK = 32  # steps taken at once by matrix products, from a multiple of it on
 _KEPT = 16 << 20  # bytes of chunks that are kept
 _SETTLED = 1e-13  # relative change of the gain that counts as none
 _LONGEST = 65_536  # the gain is taken as settled after this many steps at the latest
+_LARGE = 64  # elements of a state from which on it repays to tell which are only passed on
 
 
 @dataclass
@@ -57,6 +58,7 @@ class Kalman:
         self._a, self._c = self.a[np.ix_(self._moves, self._moves)], self.c[self._moves]
         self._memory = max(len(self._c), 1)
         self._small = products(self._a, self._c) <= MOST
+        self._step, self._step_of_moves = _quick(self.a), _quick(self._a)
         self._bytes = 8 * (_CHUNK + len(self._c)) ** 2
         self._scale = float(np.max(np.abs(np.diag(self._p + self.q)))) or 1.0
 
@@ -138,7 +140,8 @@ class Kalman:
                 del self._chunks[next(iter(self._chunks))]
             at = [min(first + i, len(self.gains) - 1) for i in range(count)]
             gains, roots = [self.gains[k][self._moves] for k in at], [self.roots[k] for k in at]
-            self._chunks[key] = (Steps if small else Chunk)(self._a, self._c, gains, roots)
+            made = (self._c, gains, roots)
+            self._chunks[key] = Steps(self._a, *made) if small else Chunk(self._step_of_moves, *made)
         return self._chunks[key]
 
     def _extend(self, step: int) -> None:
@@ -148,8 +151,8 @@ class Kalman:
             pc = p @ self.c
             known = float(self.c @ pc) <= 1e-14 * self._scale  # rounding alone is no shock
             f = float(self.c @ pc) + self.rounding
-            gain = np.zeros(len(self.c)) if known else self.a @ pc / f
-            p = self.a @ p @ self.a.T + self.q - (0.0 if known else np.outer(gain, gain) * f)
+            gain = np.zeros(len(self.c)) if known else self._step @ pc / f
+            p = (self._step @ (self._step @ p).T).T + self.q - (0.0 if known else np.outer(gain, gain) * f)
             self._p = 0.5 * (p + p.T)
             self.gains.append(gain)
             self.roots.append(0.0 if known else float(np.sqrt(f)))
@@ -168,6 +171,26 @@ class Kalman:
         return self._still >= self._memory  # gains of a season may move once a season only
 
 
+class Passing:
+    """A transition most of whose elements only become others: products with it take rows as they are."""
+
+    def __init__(self, a: NDArray):
+        passed = (np.count_nonzero(a, axis=1) == 1) & (a.max(axis=1) == 1.0)
+        self.source, self.others = np.argmax(a, axis=1), np.flatnonzero(~passed)
+        self.rows = np.ascontiguousarray(a[self.others])
+
+    def __matmul__(self, x: NDArray) -> NDArray:
+        out = x[self.source]
+        out[self.others] = self.rows @ x
+        return out
+
+
+def _quick(a: NDArray) -> NDArray | Passing:
+    """What multiplies as a transition does, quickest."""
+    passing = Passing(a) if len(a) >= _LARGE else None
+    return a if passing is None or 4 * len(passing.others) > len(a) else passing
+
+
 class Chunk:
     """Some steps at once: v = H y − O state, and state' = M state + R y.
 
@@ -175,7 +198,7 @@ class Chunk:
     is left beside whole groups are always the same paths.
     """
 
-    def __init__(self, a: NDArray, c: NDArray, gains: list[NDArray], roots: list[float]):
+    def __init__(self, a: NDArray | Passing, c: NDArray, gains: list[NDArray], roots: list[float]):
         count, d = len(gains), len(c)
         self.h, self.o = np.zeros((count, count)), np.empty((count, d))
         self.m, self.r = np.eye(d), np.zeros((d, count))

@@ -6,7 +6,7 @@ raises `unknown`, with its reason.
 
 - Moments of expressions: `covariance`, `wick` (products), `exponentials`, `cumulants` (orders 3 and 4), `fourth`,
   `ties` and `copula` (two shocks of one step).
-- Linear series: `arma`, `weights`, `recursion`, `longhand` (sums that cancel), `system` (state spaces, any step),
+- Linear series: `arma`, `weights`, `recursion`, `longhand` (sums that cancel), `system` with `along` (state spaces, any step),
   `wold`, `vector`, `fractional`, `elapsed` (unequal steps), `left` (a recorded past).
 - Volatility: `volatile` (constructors), `volatility`, `garch`, `powers`, `firstorder`, `perpetuity`, `transient`,
   `logvariance`, `parallel`.

@@ -21,7 +21,7 @@ CANCELLED = 1e4  # a sum smaller than its parts by this much has lost digits tha
 NOTHING_LEFT = 1e11  # and by this much, all of them
 Of = Callable[[np.ndarray], np.ndarray]
 Delays = tuple[Base, dict[int, float]]
-KEPT = 1_000_000  # elements of the transitions of all state spaces that are kept
+KEPT = 3_000_000  # elements of the transitions of all state spaces that are kept
 DIRECT = 10**8  # up to so many products a convolution is added up as such
 
 

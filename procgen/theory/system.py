@@ -16,6 +16,7 @@ from dataclasses import field
 import numpy as np
 
 from procgen.spec.records import dataclass
+from procgen.theory.along import Along
 from procgen.theory.arma import companion, cross_covariance
 from procgen.theory.linear import At, Base, Frozen, Key, Linear, Season, Sum, base_of, below
 from procgen.theory.sources import Source, Space
@@ -28,7 +29,7 @@ LONGEST_RESPONSE = 50_000_000  # numbers in a table of responses
 LONGEST_STILL = 64  # steps from 0 on that are looked at for values that are certain
 CANCELS = 1e-14  # of the sizes of what is added up: what is left of it is rounding
 LONGEST_MARCH = 500_000  # steps taken one by one while the variance of a source changes
-AT_ONCE = 4096  # responses that are in memory together
+MOST_SEEN = 1024  # steps whose covariances with the state are kept
 LONGEST_KEPT = 1 << 20  # steps of a covariance that are kept for the next question
 
 Distinct = tuple[np.ndarray, np.ndarray]
@@ -51,7 +52,8 @@ class System:
     settles: float = 0.0
     _table: list[tuple[np.ndarray, np.ndarray]] = field(default_factory=list, repr=False)
     _still: dict[int, np.ndarray] = field(default_factory=dict, repr=False)
-    _along: dict[tuple[int, int, int], _Along] = field(default_factory=dict, repr=False)
+    _seen: dict[tuple[int, int], np.ndarray] = field(default_factory=dict, repr=False)
+    _along: dict[tuple[int, int, int], Along] = field(default_factory=dict, repr=False)
 
     def covariance(self, i: int, j: int, t: np.ndarray, s: np.ndarray) -> np.ndarray:
         """Cov(y_i(t), y_j(s)) for one-dimensional int64 arrays of steps >= 0."""
@@ -86,7 +88,7 @@ class System:
     def carried(self, i: int, state: np.ndarray, gaps: np.ndarray) -> np.ndarray:
         """y_i as many steps after a state as `gaps` (int64, any shape) say, when there are no shocks."""
         distinct, which = np.unique(gaps, return_inverse=True)
-        return (self._rows(self.observation[i], distinct) @ state)[which].reshape(np.shape(gaps))
+        return (self.rows(self.observation[i], distinct) @ state)[which].reshape(np.shape(gaps))
 
     def _ordered(self, late: int, early: int, steps: np.ndarray, gaps: np.ndarray) -> np.ndarray:
         """Cov(y_late(step + gap), y_early(step))."""
@@ -106,13 +108,20 @@ class System:
         self._table.clear()
 
     def _by_marching(self, late: int, early: int, at: Distinct, gap_at: Distinct) -> np.ndarray:
-        rows = self._rows(self.observation[late], gap_at[0])
-        seen = np.empty((len(at[0]), len(self.initial)))
-        now, p = 0, self.initial
-        for k, step in enumerate(at[0].tolist()):
+        rows = self.rows(self.observation[late], gap_at[0])
+        return np.einsum("pi,pi->p", rows[gap_at[1]], self._seen_at(early, at[0].tolist())[at[1]])
+
+    def _seen_at(self, early: int, steps: list[int]) -> np.ndarray:
+        """Cov(s(t), y_early(t)) at ascending steps; what was asked for before is known."""
+        asked = [step for step in steps if (early, step) not in self._seen]
+        if len(self._seen) + len(asked) > MOST_SEEN:
+            self._seen.clear()
+            asked = steps
+        now, p, found = 0, self.initial, self._seen if len(asked) <= MOST_SEEN else {}
+        for step in asked:
             p = self._advance(p, now, step)
-            seen[k], now = p @ self.observation[early], step
-        return np.einsum("pi,pi->p", rows[gap_at[1]], seen[at[1]])
+            found[early, step], now = p @ self.observation[early], step
+        return np.array([found[early, step] for step in steps])
 
     def _advance(self, p: np.ndarray, now: int, step: int) -> np.ndarray:
         while self.noise_path is not None and now < min(step, self.settles):
@@ -142,10 +151,10 @@ class System:
                 self._table.append((power @ power, gathered + power @ gathered @ power.T))
         return self._table[k]
 
-    def _rows(self, row: np.ndarray, gaps: np.ndarray) -> np.ndarray:
+    def rows(self, row: np.ndarray, gaps: np.ndarray) -> np.ndarray:
         """row A^gap for ascending gaps."""
         if len(gaps) > MANY and (gaps[-1] + 1) * len(row) <= LONGEST_RESPONSE:
-            return self._responses(row, int(gaps[-1]) + 1)[gaps]
+            return self.responses(row, int(gaps[-1]) + 1)[gaps]
         rows, now = np.empty((len(gaps), len(row))), 0
         for k, gap in enumerate(gaps.tolist()):
             left, bit, now = gap - now, 0, gap
@@ -156,7 +165,7 @@ class System:
             rows[k] = row
         return rows
 
-    def _responses(self, row: np.ndarray, count: int) -> np.ndarray:
+    def responses(self, row: np.ndarray, count: int) -> np.ndarray:
         """row A^j for j < count, twice as many at a time."""
         rows, k = row[None, :], 0
         while len(rows) < count:
@@ -170,11 +179,11 @@ class System:
         if len(gaps) == 1 and int(steps.max()) < LONGEST_KEPT:
             key = (late, early, int(gaps[0]))
             if key not in self._along:
-                self._along[key] = _Along(self, *key)
+                self._along[key] = Along(self, *key)
             return self._along[key].upto(int(steps.max()) + 1)[steps]
         last = int(steps.max()) + 1
-        ahead = self._responses(self.observation[late], last + int(gaps[-1]))
-        behind = self._responses(self.observation[early], last)
+        ahead = self.responses(self.observation[late], last + int(gaps[-1]))
+        behind = self.responses(self.observation[early], last)
         psi_ahead, psi_behind = ahead @ self.loading @ self.noise, behind @ self.loading
         kept = ahead @ self.initial
         order = np.argsort(which, kind="stable")
@@ -184,32 +193,6 @@ class System:
             gathered = np.concatenate([[0.0], np.cumsum(products)])[steps[chosen]]
             out[chosen] = gathered + np.einsum("ti,ti->t", kept[gap + steps[chosen]], behind[steps[chosen]])
         return out
-
-
-class _Along:
-    """Cov(y_late(t + gap), y_early(t)) for t = 0, 1, 2 …, as far as it has been asked for: squares of responses."""
-
-    def __init__(self, system: System, late: int, early: int, gap: int):
-        self.system, self.gathered, self.known = system, 0.0, np.empty(0)
-        self.ahead = system._rows(system.observation[late], np.array([gap]))[0]  # row A^(gap + t), and
-        self.behind = system.observation[early]  # row A^t, of the next step
-
-    def upto(self, count: int) -> np.ndarray:
-        """At least so many steps."""
-        found = [self.known]
-        for begin in range(len(self.known), count, AT_ONCE):
-            found.append(self._next(min(AT_ONCE, count - begin)))
-        self.known = np.concatenate(found) if len(found) > 1 else self.known
-        return self.known
-
-    def _next(self, count: int) -> np.ndarray:
-        system = self.system
-        ahead, behind = (system._responses(row, count + 1) for row in (self.ahead, self.behind))
-        self.ahead, self.behind, ahead, behind = ahead[-1], behind[-1], ahead[:-1], behind[:-1]
-        shocks = np.einsum("tm,tm->t", ahead @ system.loading @ system.noise, behind @ system.loading)
-        sums = np.cumsum(np.concatenate([[self.gathered], shocks]))
-        self.gathered = float(sums[-1])
-        return sums[:-1] + np.einsum("ti,ti->t", ahead @ system.initial, behind)
 
 
 def _distinct(values: np.ndarray) -> Distinct:

@@ -45,7 +45,17 @@ def seasonal_walk():
     return Kalman(a, np.diag([0.09, 0, 0, 0, 1]), np.array([1.0, 0, 0, 0, 1]), np.diag([0.0, 0, 0, 0, 1]))
 
 
-@pytest.mark.parametrize("make", [level_and_ar, nearly_unit_ma, seasonal_difference, seasonal_walk])
+def long_memory():
+    """An autoregression of 72 coefficients beside noise: most of its state is only passed on."""
+    a = np.eye(73, k=-1)
+    a[0, [0, 23, 71]], a[72] = (0.5, 0.3, -0.1), 0.0
+    return Kalman(a, np.diag([1.0, *[0.0] * 71, 0.5]), np.array([1.0, *[0.0] * 71, 1.0]), np.eye(73))
+
+
+CASES = [level_and_ar, nearly_unit_ma, seasonal_difference, seasonal_walk, long_memory]
+
+
+@pytest.mark.parametrize("make", CASES)
 def test_innovations_equal_those_of_statsmodels(make):
     kalman = make()
     y, size = drawn(kalman, 300, 2, 1), len(kalman.c)

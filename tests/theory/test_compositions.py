@@ -110,6 +110,20 @@ def test_far_steps_of_an_integrated_ar():
         assert y.variance(n) == pytest.approx(exact, rel=1e-9)
 
 
+def test_steps_asked_piece_by_piece_and_all_at_once():
+    """Covariances are gone on with from the last step that was asked for; each by itself is made from step 0."""
+
+    def series(world):
+        return SeriesTheory("y", world.arma("a.noise", (0.9, -0.5))[0].integrate(0.0))
+
+    pieces, alone, steps = series(World()), series(World()), np.arange(10_000)
+    for gap in (0, 3):
+        found = [pieces.covariance(part + gap, part) for part in np.split(steps, [1, 700, 4096, 9000])]
+        some = np.array([0, 1, 699, 700, 4095, 4096, 4097, 8999, 9000, 9999])
+        each = [alone.covariance(np.array([step + gap]), np.array([step]))[0] for step in some]
+        np.testing.assert_allclose(np.concatenate(found)[some], each, rtol=1e-12)
+
+
 def test_far_lag_of_a_walk():
     """Beyond the largest state: Cov(w(t - k), w(s - k)) of a two-sided walk is that of the distances from step 0."""
     w = World()

@@ -1,0 +1,38 @@
+"""Covariances of a state space along all steps, made once and gone on with: squares of its responses, added up."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+if TYPE_CHECKING:
+    from procgen.theory.system import System
+
+AT_ONCE = 4096  # responses that are in memory together
+
+
+class Along:
+    """Cov(y_late(t + gap), y_early(t)) for t = 0, 1, 2 …, as far as it has been asked for: squares of responses."""
+
+    def __init__(self, system: System, late: int, early: int, gap: int):
+        self.system, self.gathered, self.known = system, 0.0, np.empty(0)
+        self.ahead = system.rows(system.observation[late], np.array([gap]))[0]  # row A^(gap + t), and
+        self.behind = system.observation[early]  # row A^t, of the next step
+
+    def upto(self, count: int) -> np.ndarray:
+        """At least so many steps."""
+        found = [self.known]
+        for begin in range(len(self.known), count, AT_ONCE):
+            found.append(self._next(min(AT_ONCE, count - begin)))
+        self.known = np.concatenate(found) if len(found) > 1 else self.known
+        return self.known
+
+    def _next(self, count: int) -> np.ndarray:
+        system = self.system
+        ahead, behind = (system.responses(row, count + 1) for row in (self.ahead, self.behind))
+        self.ahead, self.behind, ahead, behind = ahead[-1], behind[-1], ahead[:-1], behind[:-1]
+        shocks = np.einsum("tm,tm->t", ahead @ system.loading @ system.noise, behind @ system.loading)
+        sums = np.cumsum(np.concatenate([[self.gathered], shocks]))
+        self.gathered = float(sums[-1])
+        return sums[:-1] + np.einsum("ti,ti->t", ahead @ system.initial, behind)
