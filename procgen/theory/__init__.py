@@ -6,8 +6,8 @@ raises `unknown`, with its reason.
 
 - Moments of expressions: `covariance`, `wick` (products), `exponentials`, `cumulants` (orders 3 and 4), `fourth`,
   `ties` and `copula` (two shocks of one step).
-- Linear series: `arma`, `weights`, `recursion`, `longhand` (sums that cancel), `system` with `along` (state spaces, any step),
-  `wold`, `vector`, `fractional`, `elapsed` (unequal steps), `left` (a recorded past).
+- Linear series: `arma`, `weights`, `recursion`, `longhand` (sums that cancel), `system` with `along` (state spaces,
+  any step), `wold`, `vector`, `fractional`, `elapsed` (unequal steps), `left` (a recorded past).
 - Volatility: `volatile` (constructors), `volatility`, `garch`, `powers`, `firstorder`, `perpetuity`, `transient`,
   `logvariance`, `parallel`.
 - Processes that are no filter: `processes`, `running`, `stated`, `chains`, `markov`, `bends`, `lattice`, `distributed`,
