@@ -16,6 +16,7 @@ class Along:
     """Cov(y_late(t + gap), y_early(t)) for t = 0, 1, 2 …, as far as it has been asked for: squares of responses."""
 
     def __init__(self, system: System, late: int, early: int, gap: int):
+        self.alike = late == early and gap == 0
         self.system, self.gathered, self.known = system, 0.0, np.empty(0)
         self.ahead = system.rows(system.observation[late], np.array([gap]))[0]  # row A^(gap + t), and
         self.behind = system.observation[early]  # row A^t, of the next step
@@ -30,7 +31,8 @@ class Along:
 
     def _next(self, count: int) -> np.ndarray:
         system = self.system
-        ahead, behind = (system.responses(row, count + 1) for row in (self.ahead, self.behind))
+        ahead = system.responses(self.ahead, count + 1)
+        behind = ahead if self.alike else system.responses(self.behind, count + 1)
         self.ahead, self.behind, ahead, behind = ahead[-1], behind[-1], ahead[:-1], behind[:-1]
         shocks = np.einsum("tm,tm->t", ahead @ system.loading @ system.noise, behind @ system.loading)
         sums = np.cumsum(np.concatenate([[self.gathered], shocks]))
