@@ -49,7 +49,7 @@ def test_a_render_that_is_struck_says_so_leaves_no_process_and_goes_on(tmp_path,
     call = [sys.executable, "-c", script, "render", str(spec), "-o", str(out), "--workers", "2"]
     pipe = subprocess.PIPE
     process = subprocess.Popen(call, cwd=faults.ROOT, stdout=pipe, stderr=pipe, text=True, start_new_session=True)
-    assert faults.struck(process, out, 0.2, what, False) == "render"  # it looks for what is said, and for processes
+    assert faults.struck(process, out, 0.0, what, False) == "render"  # it looks for what is said, and for processes
     assert command("", "render", spec, "-o", out, "--resume")[0] == 0
     faults.in_order(out, pg.render(faults.SPEC).digest)
 
