@@ -6,7 +6,8 @@
 Every case is rendered and validated as whole processes, one after the other in each round, so that a slow minute of
 the machine meets both; the table gives medians, and the median of the ratios round by round. Memory is the peak
 resident size of the largest process, and processor time that of all of them. A case of 20 series has a sixteenth of
-the paths. `long` is one path of 40 million steps as float32.
+the paths. `long` is one path of 40 million steps as float32, `week` the five series of `bench_theory`, which remember
+a week of hours, 200 paths of 100,000 steps.
 """
 
 from __future__ import annotations
@@ -18,6 +19,7 @@ import statistics
 from itertools import pairwise
 from pathlib import Path
 
+from tests.bench import bench_theory
 from tests.bench.whole import PROCGEN, Run, ratio, run
 
 SPEC = """\
@@ -47,7 +49,7 @@ def main() -> None:
     args = arguments()
     paths, steps = (2048, 200) if args.quick else (args.paths, args.steps)
     args.dir.mkdir(parents=True, exist_ok=True)
-    cases = specs(paths, steps, 200_000 if args.quick else 40_000_000)
+    cases = specs(paths, steps, 200_000 if args.quick else 40_000_000, 8 if args.quick else 200)
     seen: dict[str, tuple[list[Run], list[Run]]] = {name: ([], []) for name in cases if name in (args.only or cases)}
     for _ in range(1 if args.quick else args.rounds):
         for name, (renders, validations) in seen.items():
@@ -73,7 +75,7 @@ def arguments() -> argparse.Namespace:
     return parser.parse_args()
 
 
-def specs(paths: int, steps: int, longest: int) -> dict[str, str]:
+def specs(paths: int, steps: int, longest: int, remembering: int) -> dict[str, str]:
     """The spec of every case."""
     found = {name: SPEC.format(paths=paths, steps=steps, term=term) for name, term in TERMS.items()}
     head = f"procgen: 1\nseed: 1\npaths: {paths}\ntime: {{steps: {steps}}}\nseries:\n"
@@ -85,6 +87,8 @@ def specs(paths: int, steps: int, longest: int) -> dict[str, str]:
     found["20 series"] = "\n".join([twenty + series[0], *series[1:], "correlation:", *pairs, ""])
     one = SPEC.format(paths=1, steps=longest, term=TERMS["ar2"])
     found["long"] = one.replace("x: [{", "x: {type: float32, of: [{").replace("}]\n", "}]}\n")
+    week = bench_theory.SPEC.format(s=bench_theory.SEASON, phi=bench_theory.coefficients())
+    found["week"] = week.replace("paths: 1000\n", f"paths: {remembering}\n")
     return found
 
 
