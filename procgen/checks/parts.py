@@ -35,9 +35,17 @@ Tick = Callable[[int], None]
 
 
 def tasks(
-    ensemble: OnDisk, spec: Any, columns: Mapping[str, str], same_draws: bool, workers: int = 1
+    ensemble: OnDisk,
+    spec: Any,
+    columns: Mapping[str, str],
+    same_draws: bool,
+    workers: int = 1,
+    hands: Callable[[int], int] = lambda tasks: 1,
 ) -> list[dict[str, Any]]:
-    """One task for each range of paths, in order; `columns` are the series of `spec` and where they stand."""
+    """One task for each range of paths, in order; `columns` are the series of `spec` and where they stand.
+
+    hands: how many threads each of so many tasks may have; with two, one reads while the other adds up.
+    """
     out = address(ensemble.path)
     shared = {"out": out, "manifest": ensemble.digest, "raw": spec.raw, "columns": dict(columns)}
     shared["same_draws"] = same_draws
@@ -45,6 +53,7 @@ def tasks(
     for number, part in enumerate(ensemble.manifest.parts):
         chains.setdefault((part.block.first_path, part.block.end_path), []).append(number)
     shared["compile"] = repays(ensemble.whole.rows * len(columns) // min(workers, len(chains)))
+    shared["ahead"] = hands(len(chains)) > 1
     run = secrets.token_hex(8)
     return [{"shared": shared, "parts": numbers, "run": run} for numbers in chains.values()]
 
@@ -53,11 +62,23 @@ def gather_chain(task: Mapping[str, Any], tick: Tick) -> list[dict[str, Any]]:
     """The record of one task: sums by range of paths, digest nodes by part, and what could not be read."""
     ensemble, plan = _context(task["shared"])
     chain = _Chain(ensemble, task["shared"]["columns"], task["parts"])
+    ahead = task["shared"]["ahead"] and chain.hold_two()
     one = Pass(plan, tick, task["shared"]["compile"], _outmost(task["run"]))
-    for first_path, first_step, values in chain.blocks():
+    for first_path, first_step, values in _read_ahead(chain.blocks()) if ahead else chain.blocks():
         one.absorb(first_path, first_step, values)
     sums = [[first, end, Sums(some)] for first, (end, some) in one.tree.nodes.items()]
     return [{"sums": sums, "nodes": chain.nodes, "faults": chain.faults}]
+
+
+def _read_ahead(blocks: Iterator[tuple[int, int, Values]]) -> Iterator[tuple[int, int, Values]]:
+    """The same blocks, of which another thread reads the next one while one is worked on."""
+    from concurrent.futures import ThreadPoolExecutor
+
+    with ThreadPoolExecutor(1) as reader:
+        coming = reader.submit(next, blocks, None)
+        while (block := coming.result()) is not None:
+            coming = reader.submit(next, blocks, None)
+            yield block
 
 
 @dataclass(frozen=True)
@@ -139,10 +160,17 @@ class _Chain:
 
     def __init__(self, ensemble: OnDisk, columns: Mapping[str, str], numbers: list[int]):
         self.ensemble, self.columns = ensemble, columns
+        self.held, self.pieces_read, self.parts_read = 1, 0, 0
         self.parts = {number: ensemble.manifest.parts[number] for number in numbers}
         self.nodes: list[tuple[int, dict[str, str]]] = []  # number of a part, packed nodes by column
         self.faults: list[tuple[str, str]] = []  # where, and what
-        self._room: dict[tuple[str, str], NDArray] = {}
+        self._room: dict[tuple[str, str, int], NDArray] = {}
+
+    def hold_two(self) -> bool:
+        """Whether the last two blocks can be in memory; blocks that are cut anew share what they were cut from."""
+        if len(self.parts) > 1 or next(iter(self.parts.values())).block.paths == 1:
+            self.held = 2
+        return self.held == 2
 
     def blocks(self) -> Iterator[tuple[int, int, Values]]:
         """Blocks of whole lane groups; where a part cannot be read it ends, with a fault."""
@@ -151,6 +179,7 @@ class _Chain:
         try:
             for number, part in self.parts.items():
                 yield from self._in_step(self._pieces(number, part.block, pieces), part.block)
+            self.pieces_read += 1
             next(pieces, None)  # what comes after the last row is looked at, too
         except Refused:
             raise
@@ -168,6 +197,7 @@ class _Chain:
         leaves = {name: digest.Leaves(part) for name in self.ensemble.names}
         left = part.rows
         while left:
+            self.pieces_read += 1
             block, values = next(pieces)
             left -= block.rows
             numbers = {name: self._as_float(name, values[name]) for name in leaves}
@@ -186,7 +216,8 @@ class _Chain:
         return numbers
 
     def _whole(self, blocks: Blocks, part: Block) -> tuple[int, int, Values]:
-        """A part in one piece, in the memory of the one before, which has been taken in."""
+        """A part in one piece, in the memory of one before, which has been taken in."""
+        self.parts_read += 1
         out: dict[str, NDArray] = {}
         for first_path, first_step, values in blocks:
             for name, numbers in values.items():
@@ -200,11 +231,12 @@ class _Chain:
         return self._kept("stored", name, (-(-size // 8),)).view(np.uint8)[:size]
 
     def _kept(self, kind: str, name: str, shape: tuple[int, ...]) -> NDArray:
-        """An array whose memory is that of the last one of its kind and name, if it is large enough."""
-        size = math.prod(shape)
-        if (kind, name) not in self._room or self._room[kind, name].size < size:
-            self._room[kind, name] = np.empty(size)
-        return self._room[kind, name][:size].reshape(shape)
+        """An array whose memory is that of one of its kind and name that is no more held, if it is large enough."""
+        turn = (self.parts_read if kind == "part" else self.pieces_read) % self.held
+        key, size = (kind, name, turn), math.prod(shape)
+        if key not in self._room or self._room[key].size < size:
+            self._room[key] = np.empty(size)
+        return self._room[key][:size].reshape(shape)
 
 
 def is_whole(ensemble: OnDisk, nodes: Mapping[int, Mapping[str, str]]) -> bool:

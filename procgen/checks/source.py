@@ -152,7 +152,7 @@ class EnsembleOrigin:
         if workers is None and scheduler is None:
             workers = default_workers(self.rows * len(self.columns), WORTH)
         with opened(scheduler, workers) as engine:
-            todo = tasks(self.ensemble, self.spec, self.columns, self.same_draws, engine.size)
+            todo = tasks(self.ensemble, self.spec, self.columns, self.same_draws, engine.size, engine.hands)
             if isinstance(self.ensemble.path, Path):
                 engine.check_sees(str(self.ensemble.path.absolute()))
             engine.run(Work(todo, WORK, keep, progress, 0, self.rows, lambda: prepared(todo[0])))

@@ -86,6 +86,19 @@ def test_cuts_along_the_steps_carry_what_the_shocks_need(tmp_path, monkeypatch):
     assert len(whole.manifest.parts) == 1
     assert chains == {(path, step) for path in (0, 16) for step in (0, 65_536, 131_072)}
     same_bits(gathered(whole), gathered(parts, workers=2))
+    same_bits(gathered(whole), gathered(parts, workers=4))  # two threads for each of two tasks: one reads ahead
+
+
+@pytest.mark.parametrize("paths", [1, 5])
+def test_reading_ahead_shows_in_no_bit_and_damage_is_told(tmp_path, monkeypatch, paths):
+    long = cut(LONG | {"paths": paths}, tmp_path / "long", monkeypatch, 1 << 20)
+    for _ in range(3):  # threads may meet in other ways
+        same_bits(gathered(long, workers=1), gathered(long, workers=2))
+    last = sorted((tmp_path / "long").glob("*.parquet"))[-1]
+    last.write_bytes(last.read_bytes()[:-9])
+    origin = source.origin(long, None, None)
+    origin.gathered(2, None)
+    assert [check.outcome for check in origin.faults] == ["departs", "departs"]
 
 
 def test_sums_are_plain_numbers_that_make_the_same_sums(tmp_path, monkeypatch):
