@@ -6,14 +6,14 @@ raises `unknown`, with its reason.
 
 - Moments of expressions: `covariance`, `wick` (products), `exponentials`, `cumulants` (orders 3 and 4), `fourth`,
   `ties` and `copula` (two shocks of one step).
-- Linear series: `arma`, `weights`, `recursion`, `longhand` (sums that cancel), `system` with `along` (state spaces,
-  any step), `wold`, `vector`, `fractional`, `elapsed` (unequal steps), `left` (a recorded past).
+- Linear series: `arma`, `weights`, `recursion`, `longhand` (sums that cancel), `system` with `along` and `layout`
+  (state spaces, any step), `wold`, `vector`, `fractional`, `elapsed` (unequal steps), `left` (a recorded past).
 - Volatility: `volatile` (constructors), `volatility`, `garch`, `powers`, `firstorder`, `perpetuity`, `transient`,
   `logvariance`, `parallel`.
 - Processes that are no filter: `processes`, `running`, `stated`, `chains`, `markov`, `bends`, `lattice`, `distributed`,
   `bootstrap`.
-- Laws at one step: `laws`, `gaussian`, `counted`, `lumps` (values with a chance of their own), `mixtures`, `joint`,
-  `stable`, `characteristic`, `averages`.
+- Laws at one step: `laws`, `counted`, `lumps` (values with a chance of their own), `mixtures`, `joint`, `stable`,
+  `characteristic`, `averages`.
 - What is asked of a series: `memory`, `spectrum`, `horizon` with `filtering`, `verdict` (is it stationary), `doubles`
   (what their rounding hides).
 - Drawn parameters, averaged over their law: `varied`, `quadrature`, `mixed`, `mixedseries`, `mixedlaw`, `mixedlumps`.

@@ -20,6 +20,7 @@ class Along:
         self.system, self.gathered, self.known = system, 0.0, np.empty(0)
         self.ahead = system.rows(system.observation[late], np.array([gap]))[0]  # row A^(gap + t), and
         self.behind = system.observation[early]  # row A^t, of the next step
+        self.onto, self.initial = system.entries
 
     def upto(self, count: int) -> np.ndarray:
         """At least so many steps."""
@@ -30,11 +31,11 @@ class Along:
         return self.known
 
     def _next(self, count: int) -> np.ndarray:
-        system = self.system
-        ahead = system.responses(self.ahead, count + 1)
-        behind = ahead if self.alike else system.responses(self.behind, count + 1)
-        self.ahead, self.behind, ahead, behind = ahead[-1], behind[-1], ahead[:-1], behind[:-1]
-        shocks = np.einsum("tm,tm->t", ahead @ system.loading @ system.noise, behind @ system.loading)
-        sums = np.cumsum(np.concatenate([[self.gathered], shocks]))
-        self.gathered = float(sums[-1])
-        return sums[:-1] + np.einsum("ti,ti->t", ahead @ system.initial, behind)
+        system, shocks = self.system, len(self.system.noise)
+        ahead = system.responses(self.ahead, count, self.onto)
+        behind = ahead if self.alike else system.responses(self.behind, count, self.onto)
+        products = np.einsum("tm,tm->t", ahead[:, :shocks] @ system.noise, behind[:, :shocks])
+        sums = np.cumsum(np.concatenate([[self.gathered], products]))
+        self.gathered, after = float(sums[-1]), np.array([count])
+        self.ahead, self.behind = system.rows(self.ahead, after)[0], system.rows(self.behind, after)[0]
+        return sums[:-1] + np.einsum("ti,ti->t", ahead[:, shocks:] @ self.initial, behind[:, shocks:])

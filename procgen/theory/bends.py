@@ -153,6 +153,7 @@ class Bending:
         self, x: Expression, f: Callable[[np.ndarray], np.ndarray], to: float, shift: float = 0.0
     ) -> Expression:
         """f(x), which is x + `shift` multiples of `to`, rounded to multiples of it: closed where x is Gaussian."""
+
         def process(body: Expression) -> Rounded:
             return Rounded(self.name, body + self.level(shift * to), to, lambda steps: f(mean_at(body, steps)))
 

@@ -8,7 +8,7 @@ from typing import Any
 
 import numpy as np
 
-from procgen.theory.gaussian import Gaussian
+from procgen.chance.laws.distributions import Gaussian
 from procgen.theory.lumps import Point, parts_of
 
 NODES = 120

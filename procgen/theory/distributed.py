@@ -8,9 +8,9 @@ from typing import Any
 
 import numpy as np
 
+from procgen.chance.laws.distributions import Gaussian
 from procgen.theory import known
 from procgen.theory.arma import PowerSeries
-from procgen.theory.gaussian import Gaussian
 from procgen.theory.known import Known
 from procgen.theory.processes import Held, Process, Steps, alone, at_any, mean_at
 from procgen.theory.unknown import Unknown

@@ -7,7 +7,7 @@ from typing import Any
 
 import numpy as np
 
-from procgen.theory.gaussian import Gaussian
+from procgen.chance.laws.distributions import Gaussian
 from procgen.theory.processes import Held, Process, Steps, alone, at_any
 from procgen.theory.unknown import Unknown
 from procgen.theory.verdict import LEAVES, MEMORY, SETTLES

@@ -14,8 +14,8 @@ from typing import Any
 
 import numpy as np
 
+from procgen.chance.laws.distributions import Gaussian
 from procgen.theory.arma import cross_covariance
-from procgen.theory.gaussian import Gaussian
 from procgen.theory.processes import Process, Steps
 from procgen.theory.recursion import recursed
 from procgen.theory.unknown import Unknown

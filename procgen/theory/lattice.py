@@ -14,7 +14,7 @@ from typing import Any
 
 import numpy as np
 
-from procgen.theory.gaussian import Gaussian
+from procgen.chance.laws.distributions import Gaussian
 from procgen.theory.processes import Held, Process, alone, at_any, mean_at
 from procgen.theory.unknown import Unknown
 

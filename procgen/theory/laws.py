@@ -5,12 +5,13 @@ from __future__ import annotations
 from typing import Any
 
 import numpy as np
+from scipy.special import ndtr
 
+from procgen.chance.laws.distributions import Gaussian, Lognormal
 from procgen.terms.base import LEAST_LOG
 from procgen.theory import exponentials
 from procgen.theory.covariance import covariance
 from procgen.theory.expression import Expression
-from procgen.theory.gaussian import Gaussian
 from procgen.theory.linear import At, Linear
 from procgen.theory.lumps import atoms_of, chance_of, nearest
 from procgen.theory.monomials import Term
@@ -135,18 +136,16 @@ class Affine:
 
 
 def _lognormal(space: Space, term: Term, scale: float, level: float, at: np.ndarray) -> Any:
-    from scipy import stats
-
     if term.factors or term.summed or not space.gaussian(term.sources):
         raise Unknown("a product, or an exponential of what is not Gaussian, has no closed law")
     variance = float(covariance(space, term.exponent, term.exponent, at, at)[0])
     if variance <= 0.0:
         raise Unknown("the value at that step is known, not random")
     small = (LEAST_LOG - np.log(abs(scale))) / np.sqrt(variance) if scale else np.inf
-    if stats.norm.cdf(small) > LOST:
+    if ndtr(small) > LOST:
         raise Unknown("some values are smaller than double precision tells: they are stored as 0, or with few digits")
-    law = stats.lognorm(np.sqrt(variance), scale=abs(scale))
-    return stats.lognorm(np.sqrt(variance), loc=level, scale=scale) if scale > 0 else Affine(law, level, -1.0)
+    sigma = float(np.sqrt(variance))
+    return Lognormal(sigma, scale, level) if scale > 0 else Affine(Lognormal(sigma, abs(scale)), level, -1.0)
 
 
 def _orders(space: Space, term: Term) -> list[float]:

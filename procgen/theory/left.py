@@ -6,7 +6,7 @@ from typing import Any
 
 import numpy as np
 
-from procgen.theory.gaussian import Gaussian
+from procgen.chance.laws.distributions import Gaussian
 from procgen.theory.processes import Process, Steps
 from procgen.theory.system import System
 from procgen.theory.verdict import GROWS, SETTLES, UNIT_ROOT, VARIES

@@ -18,6 +18,7 @@ from typing import Any
 
 import numpy as np
 
+from procgen.chance.laws.distributions import Lognormal
 from procgen.spec.records import dataclass
 from procgen.theory.copula import is_symmetric
 from procgen.theory.unknown import Unknown
@@ -163,9 +164,7 @@ class Stochastic(LogVariance):
         return np.log1p((self.rho * self.eta * q) ** 2)
 
     def variance_law(self):
-        from scipy.stats import lognorm
-
-        return lognorm(np.sqrt(self.log_variance), scale=np.exp(self.mean_log))
+        return Lognormal(float(np.sqrt(self.log_variance)), float(np.exp(self.mean_log)))
 
 
 @dataclass(frozen=True)

@@ -12,7 +12,7 @@ from typing import Any
 
 import numpy as np
 
-from procgen.theory.gaussian import Gaussian
+from procgen.chance.laws.distributions import Gaussian
 from procgen.theory.known import constant
 from procgen.theory.linear import At, Base, Linear, base_of
 from procgen.theory.sources import Source, Space

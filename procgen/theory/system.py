@@ -12,13 +12,15 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 from dataclasses import field
+from functools import cached_property
 
 import numpy as np
 
 from procgen.spec.records import dataclass
 from procgen.theory.along import Along
 from procgen.theory.arma import companion, cross_covariance
-from procgen.theory.linear import At, Base, Frozen, Key, Linear, Season, Sum, base_of, below
+from procgen.theory.layout import Layout, width_of
+from procgen.theory.linear import At, Base, Frozen, Key, Linear, Season, Sum, base_of
 from procgen.theory.sources import Source, Space
 from procgen.theory.unknown import Unknown
 
@@ -50,7 +52,8 @@ class System:
     sources: tuple[str, ...]
     noise_path: Callable[[np.ndarray], np.ndarray] | None = None
     settles: float = 0.0
-    _table: list[tuple[np.ndarray, np.ndarray]] = field(default_factory=list, repr=False)
+    _powers: list[np.ndarray] = field(default_factory=list, repr=False)
+    _gathered: list[np.ndarray] = field(default_factory=list, repr=False)
     _still: dict[int, np.ndarray] = field(default_factory=dict, repr=False)
     _seen: dict[tuple[int, int], np.ndarray] = field(default_factory=dict, repr=False)
     _along: dict[tuple[int, int, int], Along] = field(default_factory=dict, repr=False)
@@ -95,17 +98,20 @@ class System:
         at, gap_at = _distinct(steps), _distinct(gaps)
         size, longest = len(self.transition), int(at[0][-1] + gap_at[0][-1]) + 1
         marching = len(at[0]) * (4 * size**3 + OVERHEAD)
-        responding = longest * 2 * size**2 + len(gap_at[0]) * (longest * (size + len(self.noise)) + OVERHEAD)
+        entries = len(self.noise) + len(self.random)
+        responding = 4 * size * int((longest * entries) ** 0.5 * size + longest * entries)
+        responding += len(gap_at[0]) * (longest * 2 * entries + OVERHEAD)
         kept = self._along.get((late, early, int(gap_at[0][0]))) if len(gap_at[0]) == 1 else None
         if kept is not None and at[0][-1] < len(kept.known):
             return kept.known[steps]
-        if self.noise_path is None and responding < marching and longest * size <= LONGEST_RESPONSE:
+        if self.noise_path is None and responding < marching and longest * entries <= LONGEST_RESPONSE:
             return self._by_responses(late, early, steps, gap_at)
         return self._by_marching(late, early, at, gap_at)
 
     def rest(self) -> None:
         """Give back the memory of powers, which are made again where they are wanted."""
-        self._table.clear()
+        self._powers.clear()
+        self._gathered.clear()
 
     def _by_marching(self, late: int, early: int, at: Distinct, gap_at: Distinct) -> np.ndarray:
         rows = self.rows(self.observation[late], gap_at[0])
@@ -136,20 +142,28 @@ class System:
         gap, k = step - now, 0
         while gap:
             if gap & 1:
-                power, gathered = self._doubled(k)
-                p = power @ p @ power.T + gathered
+                p = self._power(k) @ p @ self._power(k).T + self._noise_gathered(k)
             gap, k = gap >> 1, k + 1
         return p
 
-    def _doubled(self, k: int) -> tuple[np.ndarray, np.ndarray]:
-        """A^n and the sum of A^j Q A'^j over j < n, for n = 2^k."""
-        if not self._table:
-            self._table.append((self.transition, self.loading @ self.noise @ self.loading.T))
+    def _power(self, k: int) -> np.ndarray:
+        """A^n for n = 2^k."""
+        if not self._powers:
+            self._powers.append(self.transition)
         with np.errstate(under="ignore", over="ignore", invalid="ignore"):
-            while len(self._table) <= k:
-                power, gathered = self._table[-1]
-                self._table.append((power @ power, gathered + power @ gathered @ power.T))
-        return self._table[k]
+            while len(self._powers) <= k:
+                self._powers.append(self._powers[-1] @ self._powers[-1])
+        return self._powers[k]
+
+    def _noise_gathered(self, k: int) -> np.ndarray:
+        """The sum of A^j Q A'^j over j < 2^k."""
+        if not self._gathered:
+            self._gathered.append(self.loading @ self.noise @ self.loading.T)
+        with np.errstate(under="ignore", over="ignore", invalid="ignore"):
+            while len(self._gathered) <= k:
+                power, gathered = self._power(len(self._gathered) - 1), self._gathered[-1]
+                self._gathered.append(gathered + power @ gathered @ power.T)
+        return self._gathered[k]
 
     def rows(self, row: np.ndarray, gaps: np.ndarray) -> np.ndarray:
         """row A^gap for ascending gaps."""
@@ -160,18 +174,40 @@ class System:
             left, bit, now = gap - now, 0, gap
             while left:
                 if left & 1:
-                    row = row @ self._doubled(bit)[0]
+                    row = row @ self._power(bit)
                 left, bit = left >> 1, bit + 1
             rows[k] = row
         return rows
 
-    def responses(self, row: np.ndarray, count: int) -> np.ndarray:
-        """row A^j for j < count, twice as many at a time."""
-        rows, k = row[None, :], 0
+    def responses(self, row: np.ndarray, count: int, onto: np.ndarray | None = None) -> np.ndarray:
+        """row A^j, or row A^j onto, for j < count: rows some steps apart, times columns of the steps between."""
+        if onto is None:
+            return self._apart(row, count, 0)
+        columns, k = onto, 0
+        while 4**k * onto.shape[1] < count:
+            columns = np.concatenate([columns, self._power(k) @ columns], axis=1)
+            k += 1
+        rows = self._apart(row, -(-count // (1 << k)), k)
+        return (rows @ columns).reshape(-1, onto.shape[1])[:count]
+
+    def _apart(self, row: np.ndarray, count: int, k: int) -> np.ndarray:
+        """row A^(j n) for j < count and n = 2^k, twice as many at a time."""
+        rows = row[None, :]
         while len(rows) < count:
-            rows = np.concatenate([rows, rows[: count - len(rows)] @ self._doubled(k)[0]])
+            rows = np.concatenate([rows, rows[: count - len(rows)] @ self._power(k)])
             k += 1
         return rows
+
+    @cached_property
+    def random(self) -> np.ndarray:
+        """Which elements of the state are random at step 0."""
+        return np.flatnonzero(self.initial.any(axis=1))
+
+    @cached_property
+    def entries(self) -> tuple[np.ndarray, np.ndarray]:
+        """Columns by which chance enters, those of shocks and those of the state at step 0, and its covariance."""
+        onto = np.concatenate([self.loading, np.eye(len(self.transition))[:, self.random]], axis=1)
+        return onto, self.initial[np.ix_(self.random, self.random)]
 
     def _by_responses(self, late: int, early: int, steps: np.ndarray, gap_at: Distinct) -> np.ndarray:
         """Squares of responses added up: all steps of a gap at once."""
@@ -182,16 +218,17 @@ class System:
                 self._along[key] = Along(self, *key)
             return self._along[key].upto(int(steps.max()) + 1)[steps]
         last = int(steps.max()) + 1
-        ahead = self.responses(self.observation[late], last + int(gaps[-1]))
-        behind = self.responses(self.observation[early], last)
-        psi_ahead, psi_behind = ahead @ self.loading @ self.noise, behind @ self.loading
-        kept = ahead @ self.initial
+        onto, initial = self.entries
+        ahead = self.responses(self.observation[late], last + int(gaps[-1]), onto)
+        behind = self.responses(self.observation[early], last, onto)
+        psi_ahead, psi_behind = ahead[:, : len(self.noise)] @ self.noise, behind[:, : len(self.noise)]
+        ahead, behind = ahead[:, len(self.noise) :] @ initial, behind[:, len(self.noise) :]
         order = np.argsort(which, kind="stable")
         out = np.empty(steps.shape)
         for gap, chosen in zip(gaps.tolist(), np.split(order, np.cumsum(np.bincount(which))[:-1]), strict=True):
             products = np.einsum("tm,tm->t", psi_ahead[gap : gap + last], psi_behind)
             gathered = np.concatenate([[0.0], np.cumsum(products)])[steps[chosen]]
-            out[chosen] = gathered + np.einsum("ti,ti->t", kept[gap + steps[chosen]], behind[steps[chosen]])
+            out[chosen] = gathered + np.einsum("ti,ti->t", ahead[gap + steps[chosen]], behind[steps[chosen]])
         return out
 
 
@@ -206,7 +243,7 @@ def _distinct(values: np.ndarray) -> Distinct:
 
 def state_size(forms: Sequence[Linear]) -> int:
     """Number of elements of the joint state of some forms."""
-    return _Layout(forms).size
+    return Layout(forms).size
 
 
 def system_of(space: Space, forms: Sequence[Linear]) -> System:
@@ -255,7 +292,7 @@ def _beside(one: System, other: System, rows: np.ndarray) -> System:
 
 
 def _of_filters(space: Space, forms: Sequence[Linear]) -> System:
-    layout = _Layout(forms)
+    layout = Layout(forms)
     n = layout.size
     if n > LARGEST_STATE:
         raise Unknown(f"its state has {n} elements, more than {LARGEST_STATE}")
@@ -268,7 +305,7 @@ def _of_filters(space: Space, forms: Sequence[Linear]) -> System:
         transition[at : at + depth, at : at + depth] = companion(base.phi, depth)
         loading[at, sources.index(base.source)] = 1.0
     for key in layout.kept:
-        at, width = layout.place[key], _width(key)
+        at, width = layout.place[key], width_of(key)
         transition[at : at + width, at : at + width] = np.roll(np.eye(width), 1, axis=0)
         summed = key.of.items() if isinstance(key, Season) else [(key.of, 1.0)] if isinstance(key, Sum) else []
         for part, c in summed:  # the value that it goes on from, plus what is summed at this step
@@ -292,45 +329,7 @@ def _of_filters(space: Space, forms: Sequence[Linear]) -> System:
     )
 
 
-class _Layout:
-    """Where each key stands in the state: the lags of each base, then frozen values and sums, inner ones first."""
-
-    def __init__(self, forms: Sequence[Linear]):
-        self.depth: dict[Base, int] = {}
-        kept: dict[Key, None] = {}
-        for key in (part for form in forms for whole in form for part in below(whole)):
-            base = base_of(key)
-            self.depth[base] = max(self.depth.get(base, 1), len(base.phi), _reach(key))
-            if not isinstance(key, At):
-                kept[_newest(key)] = None
-        self.kept = list(kept)
-        self.place: dict[Key, int] = {}
-        self.size = 0
-        for base, depth in self.depth.items():
-            self.place[At(base, 0)] = self.size
-            self.size += depth
-        for key in self.kept:
-            self.place[key] = self.size
-            self.size += _width(key)
-
-    def index(self, key: Key) -> int:
-        return self.place[_newest(key)] + (key.delay if isinstance(key, At | Season) else 0)
-
-
-def _newest(key: Key) -> Key:
-    return key._replace(delay=0) if isinstance(key, At | Season) else key
-
-
-def _width(key: Key) -> int:
-    """How many elements of the state a sum or a frozen value takes."""
-    return key.every if isinstance(key, Season) else 1
-
-
-def _reach(key: Key) -> int:
-    return 1 + (key.delay if isinstance(key, At) else key.back if isinstance(key, Frozen) else 0)
-
-
-def _initial(space: Space, layout: _Layout, sources: list[Source]) -> np.ndarray:
+def _initial(space: Space, layout: Layout, sources: list[Source]) -> np.ndarray:
     """Cov s(0): bases in their stationary law or from nothing, frozen values as copies of them, sums at 0."""
     bases = list(layout.depth)
     lags = np.zeros((layout.size, layout.size))
@@ -342,7 +341,7 @@ def _initial(space: Space, layout: _Layout, sources: list[Source]) -> np.ndarray
             lags[q : q + block.shape[1], p : p + len(block)] = block.T
     copy = np.eye(layout.size)
     for key in layout.kept:
-        copy[layout.place[key] : layout.place[key] + _width(key)] = 0.0
+        copy[layout.place[key] : layout.place[key] + width_of(key)] = 0.0
         if isinstance(key, Frozen):
             copy[layout.place[key], layout.place[At(key.base, 0)] + key.back] = 1.0
     return copy @ lags @ copy.T

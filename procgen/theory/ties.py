@@ -98,9 +98,7 @@ class StudentTie:
         from scipy.special import stdtrit
 
         x = float(stdtrit(self.df, share))
-        return _over_angles(
-            self.rho, lambda sine: (1.0 + 2.0 * x * x / (self.df * (1.0 + sine))) ** (-self.df / 2.0)
-        )
+        return _over_angles(self.rho, lambda sine: (1.0 + 2.0 * x * x / (self.df * (1.0 + sine))) ** (-self.df / 2.0))
 
 
 Pair = NormalTie | StudentTie

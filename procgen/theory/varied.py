@@ -87,9 +87,7 @@ class Mixture:
         """The average of what `answer` gives at each node; see `settled`."""
         return self.settled(answer)[0]
 
-    def settled(
-        self, answer: Answer, room: float = 0.0, why: str = "it may be infinite"
-    ) -> tuple[NDArray, list[Node]]:
+    def settled(self, answer: Answer, room: float = 0.0, why: str = "it may be infinite") -> tuple[NDArray, list[Node]]:
         """The average, and the nodes that it needs: half as many of any one parameter give it too, but for `room`.
 
         why: what is said where it does not settle.

@@ -7,7 +7,7 @@ from typing import Any
 
 import numpy as np
 
-from procgen.theory.gaussian import Gaussian
+from procgen.chance.laws.distributions import Gaussian
 from procgen.theory.known import observed
 from procgen.theory.linear import At, Linear
 from procgen.theory.processes import Process, Steps

@@ -117,9 +117,9 @@ class Lognormal(Law):
         return math.inf, 0.0
 
     def distribution(self) -> Any:
-        from scipy.stats import lognorm
+        from procgen.chance.laws import distributions
 
-        return lognorm(self.sigma, loc=-1 / self._sd, scale=math.exp(-(self.sigma**2) / 2) / self._sd)
+        return distributions.Lognormal(self.sigma, math.exp(-(self.sigma**2) / 2) / self._sd, -1 / self._sd)
 
     def expect(self, f: Any) -> float:
         from scipy.integrate import quad

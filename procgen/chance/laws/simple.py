@@ -44,9 +44,9 @@ class Normal(Law):
         return rate * rate / 2
 
     def distribution(self) -> Any:
-        from scipy.stats import norm
+        from procgen.chance.laws.distributions import Gaussian
 
-        return norm()
+        return Gaussian()
 
 
 @dataclass(frozen=True)

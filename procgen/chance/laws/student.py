@@ -44,9 +44,9 @@ class StudentT(Law):
         return math.prod((2 * i - 1) * (self.df - 2) / (self.df - 2 * i) for i in range(1, k // 2 + 1))
 
     def distribution(self) -> Any:
-        from scipy.stats import t
+        from procgen.chance.laws.distributions import Student
 
-        return t(self.df, scale=math.sqrt((self.df - 2) / self.df))
+        return Student(self.df, math.sqrt((self.df - 2) / self.df))
 
 
 @lru_cache(maxsize=64)
