@@ -222,11 +222,10 @@ def _score_coefficients(df: float) -> tuple[np.ndarray, np.ndarray]:
 
 def _normals(df: float, z: np.ndarray) -> np.ndarray:
     """The normals of the ranks of z / s, (points, nodes)."""
-    from scipy.special import ndtri
-    from scipy.stats import t
+    from scipy.special import ndtri, stdtr
 
     divisors, _ = _mixing(df)
-    tail = np.maximum(t.sf(np.abs(z)[:, None] / divisors, df), LEAST_TAIL)
+    tail = np.maximum(stdtr(df, -np.abs(z)[:, None] / divisors), LEAST_TAIL)
     return np.copysign(ndtri(tail), z[:, None])
 
 
