@@ -120,6 +120,22 @@ class SeriesPlan:
         return math.sqrt(excess + 2.0) if excess + 3.0 > _RARE else 0.0
 
     @cached_property
+    def repeats(self) -> dict[int, float]:
+        """By lag of the pool: how many steps in a row are about as good as one, for the average of what it looks at.
+
+        Only asked for where laws are skewed: it takes the variance of the averages, of all lags at once.
+        """
+        pool = self.pool
+        assert pool is not None
+        lags = list(dict.fromkeys((0, *pool.lags)))
+        steps = pool.last - pool.first - np.array(lags, dtype=np.int64)
+        found = self.theory.variance_of_mean(steps) if pool.steady and self.drawn[-1] > 0 else None
+        if found is None:
+            return dict.fromkeys(lags, 1.0)
+        many = np.where(np.isfinite(found), steps * found / self.drawn[-1], 1.0)
+        return dict(zip(lags, np.maximum(many, 1.0).tolist(), strict=True))
+
+    @cached_property
     def square_sd(self) -> float | None:
         """Standard deviation of a path's average square over the pool, where moments do not depend on the step.
 
