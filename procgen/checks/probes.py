@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 
 from procgen.checks import rounding
 from procgen.checks.pools import Pool, noise, plan_pool
-from procgen.checks.saddle import summand
+from procgen.checks.saddle import made_of
 from procgen.checks.scores import Scores
 from procgen.spec.records import dataclass
 from procgen.theory.lumps import atoms_of, chance_of
@@ -107,7 +107,10 @@ class SeriesPlan:
         only two values (Pearson 1916).
         """
         if order not in self._skewness:
-            found = [summand(scores.distribution, lambda z: z**order).skew for scores in self.scores.values()]
+            laws = list(self.scores.values())
+            if self.theory.stationarity.strict_deviations:
+                laws = laws[:1]  # they are all the same
+            found = [made_of(scores.nodes, lambda z: z**order).skew for scores in laws]
             self._skewness[order] = max(map(abs, found), default=self._of_rare)
         return self._skewness[order]
 
