@@ -93,17 +93,9 @@ def _hidden(plan: SeriesPlan, pool: Pool, lag: int, slope: float = 0.0) -> float
     """
     steps = pool.last - pool.first - max(lag, 0)
     skew = plan.skewness(2 if lag == 0 else 1)
-    repeats = _repeats(plan, pool, steps) if skew else 1.0
+    repeats = plan.repeats[max(lag, 0)] if skew else 1.0
     pairs = skew * skew / (1.0 + min(abs(slope), 1.0) * skew * skew) if lag > 0 else 1.0
     return skew * math.sqrt(pairs * repeats / steps)
-
-
-def _repeats(plan: SeriesPlan, pool: Pool, steps: int) -> float:
-    """How many steps in a row are about as good as one, for their average."""
-    found = plan.theory.variance_of_mean(np.array([steps])) if pool.steady else None
-    if found is None or not math.isfinite(found[0]) or not plan.drawn[-1] > 0:
-        return 1.0
-    return max(1.0, steps * float(found[0]) / float(plan.drawn[-1]))
 
 
 def _change(plan: SeriesPlan, each: Changes, sample: Sample) -> Check:
@@ -140,7 +132,7 @@ def _share(plan: SeriesPlan, pool: Pool, k: int, sample: Sample) -> Iterator[Che
                     note=few_paths(sample.n, FEW_PATHS))  # fmt: skip
         return
     steps = pool.last - pool.first
-    hidden = (1.0 - 2.0 * chance) / math.sqrt(chance * (1.0 - chance)) * math.sqrt(_repeats(plan, pool, steps) / steps)
+    hidden = (1.0 - 2.0 * chance) / math.sqrt(chance * (1.0 - chance)) * math.sqrt(plan.repeats[0] / steps)
     yield Check.of(plan.name, what, probe, "law", judge.sample_mean(sample, chance, None, hidden))
 
 

@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 
 from procgen.checks import rounding
 from procgen.checks.pools import Pool, noise, plan_pool
-from procgen.checks.saddle import summand
+from procgen.checks.saddle import made_of
 from procgen.checks.scores import Scores
 from procgen.spec.records import dataclass
 from procgen.theory.lumps import atoms_of, chance_of
@@ -107,7 +107,10 @@ class SeriesPlan:
         only two values (Pearson 1916).
         """
         if order not in self._skewness:
-            found = [summand(scores.distribution, lambda z: z**order).skew for scores in self.scores.values()]
+            laws = list(self.scores.values())
+            if self.theory.stationarity.strict_deviations:
+                laws = laws[:1]  # they are all the same
+            found = [made_of(scores.nodes, lambda z: z**order).skew for scores in laws]
             self._skewness[order] = max(map(abs, found), default=self._of_rare)
         return self._skewness[order]
 
@@ -118,6 +121,22 @@ class SeriesPlan:
         found = [self.theory.excess_kurtosis_at(int(step)) for step in {self.steps[0], self.steps[-1]}]
         excess = max((each for each in found if each is not None and math.isfinite(each)), default=0.0)
         return math.sqrt(excess + 2.0) if excess + 3.0 > _RARE else 0.0
+
+    @cached_property
+    def repeats(self) -> dict[int, float]:
+        """By lag of the pool: how many steps in a row are about as good as one, for the average of what it looks at.
+
+        Only asked for where laws are skewed: it takes the variance of the averages, of all lags at once.
+        """
+        pool = self.pool
+        assert pool is not None
+        lags = list(dict.fromkeys((0, *pool.lags)))
+        steps = pool.last - pool.first - np.array(lags, dtype=np.int64)
+        found = self.theory.variance_of_mean(steps) if pool.steady and self.drawn[-1] > 0 else None
+        if found is None:
+            return dict.fromkeys(lags, 1.0)
+        many = np.where(np.isfinite(found), steps * found / self.drawn[-1], 1.0)
+        return dict(zip(lags, np.maximum(many, 1.0).tolist(), strict=True))
 
     @cached_property
     def square_sd(self) -> float | None:

@@ -18,6 +18,7 @@ from procgen.checks import power, tails
 from procgen.checks.judge import Finding
 from procgen.spec.records import dataclass
 
+Nodes = tuple[NDArray, NDArray]  # of a law: values and their weights
 REACH = 5.0  # standard errors: a sum is not judged where one number alone may carry it that far
 _NODES = 1024
 _LAST = 7.5  # normal score of the outermost node: what lies beyond has a probability of 6e-14
@@ -102,7 +103,19 @@ def _tail(r: float, u: float) -> float:
 
 
 def summand(distribution: Any, of: Callable[[NDArray], NDArray], farthest: float = math.inf) -> Summand:
-    """What `of` makes of a law with `ppf`, as nodes and weights; sizes beyond `farthest` are left out.
+    """What `of` makes of a law with `ppf`; sizes beyond `farthest` are left out."""
+    return made_of(nodes(distribution), of, farthest)
+
+
+def made_of(nodes: Nodes, of: Callable[[NDArray], NDArray], farthest: float = math.inf) -> Summand:
+    """What `of` makes of a law as nodes and weights; sizes beyond `farthest` are left out."""
+    values, weight = of(nodes[0]), nodes[1]
+    usable = np.isfinite(values) & (np.abs(values) <= farthest)
+    return Summand(values[usable], weight[usable])
+
+
+def nodes(distribution: Any) -> Nodes:
+    """A law with `ppf` as values and weights.
 
     Values with a chance of their own, where the law tells them (`lumps`: values and chances), are nodes with that
     chance; what is continuous lies between them.
@@ -113,14 +126,12 @@ def summand(distribution: Any, of: Callable[[NDArray], NDArray], farthest: float
     u, density = ndtr(g), np.exp(-0.5 * g**2)
     lumps, chances = getattr(distribution, "lumps", (_NONE, _NONE))
     upto = np.asarray(distribution.cdf(lumps), float) if lumps.size else _NONE
-    nodes, weights = [lumps], [chances]
+    found, weights = [lumps], [chances]
     for low, high in zip(np.append(0.0, upto), np.append(upto - chances, 1.0), strict=True):
         if high - low > _LEAST:
-            nodes.append(np.asarray(distribution.ppf(low + (high - low) * u), dtype=float))
+            found.append(np.asarray(distribution.ppf(low + (high - low) * u), dtype=float))
             weights.append((high - low) * density / density.sum())
-    values, weight = of(np.concatenate(nodes)), np.concatenate(weights)
-    usable = np.isfinite(values) & (np.abs(values) <= farthest)
-    return Summand(values[usable], weight[usable])
+    return np.concatenate(found), np.concatenate(weights)
 
 
 def sum_finding(z: float, n: int, law: Summand, error: float, theory: float = 0.0) -> Finding:

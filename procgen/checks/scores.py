@@ -12,7 +12,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from procgen.checks.saddle import REACH, Summand, summand
+from procgen.checks.saddle import REACH, Nodes, Summand, made_of, nodes
 from procgen.theory.mixedlaw import Normal
 
 BINS = 4096
@@ -145,8 +145,13 @@ class Scores:
         """The law of one shock (order 1) or its square (order 2), without what no sum of n may rest on."""
         if (order, n) not in self._summands:
             sd = np.sqrt(max(float(self.law.moment(2 * order)) - float(order == 2), 0.0))
-            self._summands[order, n] = summand(self.distribution, lambda z: z**order, REACH * sd * np.sqrt(n))
+            self._summands[order, n] = made_of(self.nodes, lambda z: z**order, REACH * sd * np.sqrt(n))
         return self._summands[order, n]
+
+    @cached_property
+    def nodes(self) -> Nodes:
+        """The law as values and weights."""
+        return nodes(self.distribution)
 
     def component_sums(self, counts: NDArray) -> NDArray:
         """(8,) standardised component sums, each asymptotically standard normal."""

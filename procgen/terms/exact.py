@@ -11,6 +11,7 @@ from procgen.spec.records import dataclass
 from procgen.terms.base import Ahead, Array, State
 
 LONGEST_EXACT = 10_000  # steps: their work grows with the square of them
+MARKS = 256  # steps: so far apart are weights kept
 NARROW = 64  # paths, from which on a call for each step before costs less than all of them at once
 
 
@@ -35,27 +36,34 @@ def predicted(weights: Array, past: Array, z: Array, out: Array) -> None:
 class Predictors(local):
     """Best linear predictors from all t values before (Durbin 1960; Levinson 1947), by autocorrelations at all lags.
 
-    Each thread has weights of its own, as each is at a step of its own.
+    Each thread has weights of its own, as each is at a step of its own. Whoever goes back, as a tile that is undone
+    after it was drawn, goes on from the weights that were met last at a multiple of `MARKS` steps.
     """
 
     def __init__(self, gamma: Array):
         self.gamma = gamma
-        self._restart()
-
-    def _restart(self) -> None:
         self.weights, self.variance = np.zeros(0), 1.0
+        self._marks = [(self.weights, self.variance)]
 
     def at(self, t: int) -> tuple[Array, float]:
         """The weights of the last t values, newest first, and the standard deviation of what is new; sd 1."""
         if t < len(self.weights):
-            self._restart()
+            self.weights, self.variance = self._marks[t // MARKS]
         while len(self.weights) < t:
-            known = len(self.weights)
-            missed = self.gamma[known + 1] - added(self.weights * self.gamma[known:0:-1])
-            partial = missed / self.variance
-            self.weights = np.append(self.weights - partial * self.weights[::-1], partial)
-            self.variance = self.variance * (1.0 - partial * partial)
+            self._next()
         return self.weights, float(np.sqrt(self.variance))
+
+    def _next(self) -> None:
+        """Weights of one value more."""
+        known = len(self.weights)
+        missed = self.gamma[known + 1] - added(self.weights * self.gamma[known:0:-1])
+        partial = missed / self.variance
+        weights = np.empty(known + 1)
+        np.subtract(self.weights, partial * self.weights[::-1], out=weights[:known])
+        weights[known] = partial
+        self.weights, self.variance = weights, self.variance * (1.0 - partial * partial)
+        if (known + 1) % MARKS == 0 and (known + 1) // MARKS == len(self._marks):
+            self._marks.append((self.weights, self.variance))
 
 
 @dataclass(frozen=True)
@@ -96,9 +104,12 @@ class Exact:
 
 
 def added(values: Array) -> float:
-    """The sum of a vector, halves onto halves: an order that is the same everywhere."""
-    while len(values) > 1:
-        half = len(values) // 2
-        rest = values[2 * half :]
-        values = np.append(values[:half] + values[half : 2 * half], rest)
-    return float(values[0]) if len(values) else 0.0
+    """The sum of a vector, which is used up: halves onto halves, an order that is the same everywhere."""
+    n = len(values)
+    while n > 1:
+        half = n // 2
+        np.add(values[:half], values[half : 2 * half], out=values[:half])
+        if n % 2:
+            values[half] = values[n - 1]
+        n -= half
+    return float(values[0]) if n else 0.0

@@ -27,8 +27,8 @@ class Followed(NamedTuple):
 
 def follow(chain: Any, values: Array, state: State | None) -> Followed:
     """Steps that follow `state` (None: none came before); a value that is no state is followed no further."""
-    stages = range(len(chain.owners))
-    first = [1.0 if chain.owners.index(owner) == i else 0.0 for i, owner in enumerate(chain.owners)]
+    owners = np.array(chain.owners, float)[:, None]
+    first = np.array([[1.0 if chain.owners.index(owner) == i else 0.0] for i, owner in enumerate(chain.owners)])
     chances = np.empty((len(chain.names), *values.shape))
     before, age = np.empty(values.shape), np.empty(values.shape)
     belief: Any = None
@@ -44,13 +44,13 @@ def follow(chain: Any, values: Array, state: State | None) -> Followed:
         age[t] = 0.0 if since is None else since
         since = np.ones(x.shape) if last is None else np.where(x == last, since + 1.0, 1.0)
         last = x
-        kept = [np.where(x == chain.owners[i], ahead[i], 0.0) for i in stages]
+        own = x == owners
+        kept = np.where(own, ahead, 0.0)
         total = _sum(kept)
-        entered = [np.where(x == chain.owners[i], first[i], 0.0) for i in stages]
-        known = np.where(np.isnan(_sum(ahead)) | (_sum(entered) < 1.0), np.nan, 1.0)
+        known = np.where(np.isnan(_sum(ahead)) | ~own.any(axis=0), np.nan, 1.0)
         could = total > 0.0  # what could not happen is taken as just entered
         total = np.where(could, total, 1.0)
-        belief = np.stack([known * np.where(could, k / total, e) for k, e in zip(kept, entered, strict=True)])
+        belief = known * np.where(could, kept / total, np.where(own, first, 0.0))
     carried = {} if belief is None else {"belief": belief, "last": last[None, :], "age": since[None, :]}
     return Followed(chances, before, age, carried)
 
@@ -60,15 +60,15 @@ def stages(chain: Any) -> tuple[Array, Array, tuple[int, ...]]:
     return (chain.shares if chain.start is None else np.eye(len(chain.p))[chain.start]), chain.p, chain.owners
 
 
-def _first(chain: Any, x: Array) -> list[Array]:
-    """Chances of the stages at step 0."""
+def _first(chain: Any, x: Array) -> Array:
+    """Chances of the stages at step 0, (stages, paths)."""
     at = chain.shares if chain.start is None else np.eye(len(chain.p))[chain.start]
-    return [np.full(x.shape, share) for share in at]
+    return np.tile(np.asarray(at, float)[:, None], x.shape)
 
 
-def _next(chain: Any, belief: Array) -> list[Array]:
-    """Chances of the stages at the next step."""
-    return [_sum(b * p for b, p in zip(belief, to, strict=True)) for to in chain.p.T]
+def _next(chain: Any, belief: Array) -> Array:
+    """Chances of the stages at the next step, (stages, paths)."""
+    return _sum(b * to[:, None] for b, to in zip(belief, chain.p, strict=True))
 
 
 def _sum(parts: Any) -> Any:

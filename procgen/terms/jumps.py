@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from typing import ClassVar
+from functools import lru_cache
+from typing import Any, ClassVar
 
 import numpy as np
 
@@ -14,6 +15,12 @@ from procgen.terms.base import LAW, Ahead, Draw, Term, number
 
 UNIFORM = LAWS["uniform"]()
 MOST_DRAWN = 2.0  # mean number of jumps a step that are drawn one by one
+
+
+@lru_cache(maxsize=64)
+def law_of(jumps: Jumps) -> Any:
+    """The law of a sum of jumps, which SciPy takes milliseconds to make: every tile and every probe asks for it."""
+    return jumps.distribution()
 
 
 class CompoundPoisson(Term):
@@ -72,7 +79,7 @@ class CompoundPoisson(Term):
         return "" if self.law.gaussian else "the law of a sum of jumps is computed for normal ones only"
 
     def rank(self, values, cell, known, state, at):
-        law = Jumps(self.rate, self.mean, self.sd).distribution()
+        law = law_of(Jumps(self.rate, self.mean, self.sd))
         return (law.cdf(cell[0]), law.cdf(cell[1])), {}
 
     @property
@@ -80,7 +87,7 @@ class CompoundPoisson(Term):
         return ("jumps", "large jumps")
 
     def events(self, values, cell, known, state, at):
-        law, grain = Jumps(self.rate, self.mean, self.sd).distribution(), float(np.max(cell[1] - cell[0]))
+        law, grain = law_of(Jumps(self.rate, self.mean, self.sd)), float(np.max(cell[1] - cell[0]))
         jumped = 1.0 - float(law.cdf(grain / 2.0) - law.cdf(np.nextafter(-grain / 2.0, -np.inf)))
         large = abs(self.mean) + self.sd
         edge = (np.floor(large / grain) + 0.5) * grain if grain > 1e-9 * large else large
@@ -103,7 +110,7 @@ class CompoundPoisson(Term):
         four = m**4 + 6.0 * m**2 * sd**2 + 4.0 * m * sd**3 * z[3] + sd**4 * z[4]
         rate, key = axis.level(self.rate), self.address
         central = (0.0, two), (0.0, three), (0.0, four, 3.0 * two * two)
-        law = (lambda _: Jumps(self.rate, m, sd).distribution()) if self.law.gaussian else None
+        law = (lambda _: law_of(Jumps(self.rate, m, sd))) if self.law.gaussian else None
         total = axis.drawn(key, UNIFORM, rate, (0.0, m), central, law, lumpy=True, highest=self.law.highest_moment)
         poisson = (0.0, 1.0), (0.0, 1.0), (0.0, 1.0, 3.0)
         jumps = axis.drawn(

@@ -13,7 +13,7 @@ from procgen.chance.portable import exp, log
 from procgen.chance.tables import Poisson, uniforms
 from procgen.spec.declare import Parameter, Real, Record
 from procgen.terms.base import Ahead, Draw, Term, Unknown, number, signed
-from procgen.terms.jumps import Jumped
+from procgen.terms.jumps import Jumped, law_of
 from procgen.terms.support import POSITIVE
 from procgen.terms.walk import RandomWalk
 
@@ -183,7 +183,7 @@ class Merton(Term):
     def rank(self, values, cell, known, state, at):
         if np.max((cell[1] - cell[0]) / values) > COARSE * self.sd:
             return Unknown(f"values of {self.address} are rounded too coarsely for the change of a step")
-        logs, law = np.log(values), self.change().distribution()
+        logs, law = np.log(values), law_of(self.change())
         first = self._log_before(values) if state is None else state["x"]
         before = np.concatenate([first, logs[:-1]])
         lower, upper = (law.cdf(np.log(edge) - before) for edge in cell)
@@ -201,7 +201,7 @@ class Merton(Term):
         return Jumped(self.rate, first=1 - self.moved) if output == "jumps" else None
 
     def events(self, values, cell, known, state, at):
-        law, logs = self.change().distribution(), np.log(values)
+        law, logs = law_of(self.change()), np.log(values)
         first = self._log_before(values) if state is None else state["x"]
         moved = np.abs(np.diff(np.concatenate([first, logs]), axis=0) - self.step_drift())
         beyond = law.cdf(self.step_drift() - FAR * self.sd) + law.sf(self.step_drift() + FAR * self.sd)

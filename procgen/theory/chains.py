@@ -14,6 +14,8 @@ from procgen.theory.unknown import Unknown
 
 Steps = np.ndarray
 AT_ONCE = 1 << 14
+KEPT = 1 << 21  # numbers of the table of powers that a chain keeps
+DENSE = 8  # times as many steps as are asked for may be worked out for it
 FORGETS = 1.0 - 1e-9  # a chain whose second eigenvalue is nearer to 1 in modulus never forgets its start
 
 
@@ -24,6 +26,7 @@ class States:
         self.p, self.start = np.asarray(transitions, float), start
         self.shares = np.zeros(len(self.p)) if shares is None else np.asarray(shares, float)
         self.decay = self.p - self.shares
+        self._powers = np.zeros((0, *self.p.shape))  # of the first gaps
 
     @property
     def forgets(self) -> bool:
@@ -36,10 +39,17 @@ class States:
         return self.shares + self.left(steps)[..., self.start, :]
 
     def left(self, gaps: Steps) -> np.ndarray:
-        """P^h - 1 q' at gaps h >= 0, (*gaps, K, K), by repeated squaring."""
+        """P^h - 1 q' at gaps h >= 0, (*gaps, K, K)."""
         gaps = np.asarray(gaps, np.int64)
         if gaps.min(initial=0) < 0:
             raise Unknown("a chain that leaves from a given state has no past")
+        count = 1 << int(gaps.max(initial=0)).bit_length()  # the same are asked for again and again
+        if len(self._powers) < count <= min(DENSE * gaps.size, KEPT // self.p.size):
+            self._powers = self._left(np.arange(count))
+        return self._powers[gaps] if count <= len(self._powers) else self._left(gaps)
+
+    def _left(self, gaps: Steps) -> np.ndarray:
+        """By repeated squaring."""
         power, out = self.decay, np.broadcast_to(np.eye(len(self.p)), (*gaps.shape, len(self.p), len(self.p)))
         for bit in range(int(gaps.max(initial=0)).bit_length()):
             out = np.where((gaps >> bit & 1)[..., None, None], out @ power, out)

@@ -121,7 +121,7 @@ import sys
 import procgen as pg
 from procgen.chance.kernel import compiling
 with compiling():
-    series = {"x": [{"random_walk": {"sd": 1}}]}
+    series = {"x": [{"integrate": {"of": [{"constant": 3}]}}]}
     pg.render({"procgen": 1, "seed": 1, "paths": 300, "time": {"steps": 3}, "series": series})
 print(pg.__file__)
 """

@@ -37,12 +37,13 @@ def through_states(g: np.ndarray) -> np.ndarray:
     chances = np.full((2, len(g)), 0.5)
     out, spreads = np.empty(g.shape), np.array([[1.0], [2.0]])
     for t, u in enumerate(special.ndtr(g).T):
-        ends = np.sort([g[:, t], 2 * g[:, t]], axis=0)  # in one state, or the other
-        for _ in range(50):
-            middle = ends.mean(axis=0)
-            above = (chances * special.ndtr(middle / spreads)).sum(axis=0) > u
-            ends = np.where(above, [ends[0], middle], [middle, ends[1]])
-        out[:, t] = ends.mean(axis=0)
+        low, high = np.minimum(g[:, t], 2 * g[:, t]), np.maximum(g[:, t], 2 * g[:, t])  # in one state, or the other
+        for _ in range(40):
+            middle = 0.5 * (low + high)
+            narrow, wide = special.ndtr(middle / spreads)
+            above = chances[0] * narrow + chances[1] * wide > u
+            low, high = np.where(above, low, middle), np.where(above, middle, high)
+        out[:, t] = 0.5 * (low + high)
         chances = chances * np.exp(-0.5 * (out[:, t] / spreads) ** 2) / spreads
         chances /= chances.sum(axis=0)
         chances = 0.75 * chances + 0.25 * chances[::-1]  # stays of 4 steps

@@ -14,6 +14,7 @@ import sys
 from collections.abc import Iterable, Iterator
 from dataclasses import replace
 from functools import lru_cache
+from itertools import chain
 from pathlib import Path
 from typing import Any
 
@@ -277,8 +278,9 @@ def _checks(plant: Plant, data: Any) -> Iterable[Any]:
         return cross_checks(plant.series, gather.cross[pair], gather.plan.shock_pairs[pair].at)
     if plant.what.startswith("shocks: correlation "):
         return untied_checks(plant.series, gather.cross[pair])
-    if plant.what.startswith("shocks: ") and plant.series not in gather.led:
-        return shock_checks(plant.series, gather.shocks[plant.series], "")
+    if plant.what.startswith("shocks: "):
+        rows = shock_checks(plant.series, gather.shocks[plant.series], "")
+        return chain(rows, gather.led[plant.series].checks(plant.series)) if plant.series in gather.led else rows
     return judged(gather)
 
 
