@@ -52,7 +52,7 @@ def test_killed_at_any_moment_then_resumed_gives_the_same_digest(tmp_path, spec,
 @pytest.mark.parametrize("signum", [signal.SIGINT, signal.SIGTERM])
 def test_ctrl_c_and_termination_leave_whole_parts_and_no_process(tmp_path, signum, claimed):
     # so slow that a busy machine cannot finish it between a line that is read and the signal
-    render = start(WIDE | {"_pause": 1.0}, tmp_path, **PARTS, claimed=claimed, workers=2)
+    render = start(WIDE | {"_pause": 3.0}, tmp_path, **PARTS, claimed=claimed, workers=2)
     for _ in range(2):
         render.stdout.readline()
     os.killpg(render.pid, signum)
