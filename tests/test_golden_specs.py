@@ -10,6 +10,7 @@ import sys
 import pytest
 
 from procgen.chance.kernel import available
+from tests import long_specs
 from tests.chance.golden import dispatched
 from tests.golden_specs import FILE, ROOT, digests
 
@@ -23,6 +24,11 @@ def test_the_gallery_draws_what_it_always_drew():
 @pytest.mark.skipif(not available(), reason="the speed extra is not installed")
 def test_compiled_recursions_draw_the_same():
     assert digests(compiled=True) == GOLDEN
+
+
+@pytest.mark.skipif(not available(), reason="the speed extra is not installed")
+def test_compiled_recursions_of_many_coefficients_and_in_pieces_draw_what_one_step_after_another_drew():
+    assert long_specs.digests(compiled=True) == json.loads(long_specs.FILE.read_text())
 
 
 def test_without_any_feature_above_the_baseline():

@@ -1,12 +1,13 @@
 """The same bits everywhere: digests of every gallery spec under many settings, as a table.
 
-    python -m tests.studies.same_bits [--python COMMAND]... [--only WORD,...] [--list]
+    python -m tests.studies.same_bits [--python COMMAND]... [--only WORD,...] [--specs WORD,...] [--list]
 
 Each setting is drawn in a process of its own and compared with the frozen digests in tests/golden (40 paths, at most
-60 steps). Settings with several processes draw 112 paths in seven parts, and are compared with the same paths drawn in
-one process in one go. COMMAND is how to start another Python, which needs NumPy, SciPy, PyYAML, pandas, pyarrow, typer
-and tzdata; settings that need what it has not, such as numba, are left out, and named. Without --python it is this one.
-Ends with 1 where anything differs. In a checkout that nobody edits meanwhile: each process reads the sources again.
+60 steps); so are those of tests/long_specs.py, `--specs long` these alone. Settings with several processes draw 112
+paths in seven parts, and are compared with the same paths drawn in one process in one go. COMMAND is how to start
+another Python, which needs NumPy, SciPy, PyYAML, pandas, pyarrow, typer and tzdata; settings that need what it has not,
+such as numba, are left out, and named. Without --python it is this one. Ends with 1 where anything differs. In a
+checkout that nobody edits meanwhile: each process reads the sources again.
 
 The oldest versions that pyproject.toml allows:
 
@@ -51,6 +52,7 @@ from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field
 from importlib import import_module
 from importlib.util import find_spec
+from itertools import chain
 from pathlib import Path
 from typing import Any
 
@@ -163,12 +165,16 @@ def scheduler(setting: Setting) -> Iterator[str | None]:
         yield cluster.scheduler_address
 
 
-def draw(setting: Setting) -> dict[str, dict[str, str]]:
-    """Digests by spec that the setting gives in this process, and those expected."""
-    from tests.golden_specs import FILE, small
+def draw(setting: Setting, words: list[str]) -> dict[str, dict[str, str]]:
+    """Digests by spec that the setting gives in this process, and those expected; of specs with one of the words."""
+    from tests import golden_specs, long_specs
 
-    specs = list(small(WIDE if setting.workers else 40))
-    expected = json.loads(FILE.read_text())
+    paths = WIDE if setting.workers else 40
+    specs = [
+        (name, spec) for name, spec in chain(golden_specs.small(paths), long_specs.long(paths)) if has(name, words)
+    ]
+    frozen = json.loads(golden_specs.FILE.read_text()) | json.loads(long_specs.FILE.read_text())
+    expected = {name: digest for name, digest in frozen.items() if has(name, words)}
     if setting.workers:
         expected = {name: digest_of(spec) for name, spec in specs}
         set_constants({f"{PLAN}.PART_BYTES": 1, f"{PLAN}.NARROW": 16, f"{PLAN}.BUSY_ROWS": 0})
@@ -181,6 +187,11 @@ def draw(setting: Setting) -> dict[str, dict[str, str]]:
         outs = ({"out": Path(folder) / name, **work} if work else {} for name, _ in specs)
         found = {name: digest_of(spec, **out) for (name, spec), out in zip(specs, outs, strict=True)}
     return {"found": found, "expected": expected}
+
+
+def has(name: str, words: list[str]) -> bool:
+    """Whether a name has one of the words."""
+    return any(word in name for word in words)
 
 
 def digest_of(spec: Any, **options: Any) -> str:
@@ -207,7 +218,7 @@ def asked(command: list[str], *words: str, **environment: str) -> Any:
     return json.loads(done.stdout.splitlines()[-1])
 
 
-def row(command: list[str], about: Mapping[str, Any], setting: Setting) -> tuple[str, bool]:
+def row(command: list[str], about: Mapping[str, Any], setting: Setting, specs: str) -> tuple[str, bool]:
     """A line of the table, and whether nothing differs."""
     if lacking := setting.lacks(about):
         return f"| {about['name']} | {setting.name} | {lacking} | | |", True
@@ -217,7 +228,7 @@ def row(command: list[str], about: Mapping[str, Any], setting: Setting) -> tuple
     with tempfile.TemporaryDirectory() as cache:
         if "NUMBA_CPU_NAME" in environment:
             environment["XDG_CACHE_HOME"] = cache
-        drawn = asked(command, "--draw", setting.name, **environment)
+        drawn = asked(command, "--draw", setting.name, "--specs", specs, **environment)
     found, expected = drawn["found"], drawn["expected"]
     differing = sorted(name for name in found.keys() | expected if found.get(name) != expected.get(name))
     for name in differing[:3]:
@@ -231,6 +242,7 @@ def main() -> None:
     parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
     parser.add_argument("--python", action="append", default=[], metavar="COMMAND")
     parser.add_argument("--only", metavar="WORD,...", help="settings whose names have one of the words")
+    parser.add_argument("--specs", default="", metavar="WORD,...", help="specs whose names have one of the words")
     parser.add_argument("--list", action="store_true", help="print the settings")
     parser.add_argument("--facts", action="store_true", help=argparse.SUPPRESS)
     parser.add_argument("--draw", metavar="SETTING", help=argparse.SUPPRESS)
@@ -239,10 +251,11 @@ def main() -> None:
         print(json.dumps(facts()))
         return
     if given.draw:
-        print(json.dumps(draw(next(setting for setting in SETTINGS if setting.name == given.draw))))
+        chosen = next(setting for setting in SETTINGS if setting.name == given.draw)
+        print(json.dumps(draw(chosen, given.specs.split(","))))
         return
     words = given.only.split(",") if given.only else [""]
-    settings = [setting for setting in SETTINGS if any(word in setting.name for word in words)]
+    settings = [setting for setting in SETTINGS if has(setting.name, words)]
     if given.list:
         print("\n".join(setting.name for setting in settings))
         return
@@ -251,7 +264,7 @@ def main() -> None:
     for command in map(shlex.split, given.python or [shlex.quote(sys.executable)]):
         about = asked(command, "--facts")
         for setting in settings:
-            line, fine = row(command, about, setting)
+            line, fine = row(command, about, setting, given.specs)
             print(line, flush=True)
             same = same and fine
     sys.exit(not same)
