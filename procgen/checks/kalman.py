@@ -9,6 +9,7 @@ of paths where the state is small (`small`), by matrix products where it is not.
 from __future__ import annotations
 
 from dataclasses import field
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
@@ -17,7 +18,8 @@ from procgen.checks.blocks import BLOCK, GROUP
 from procgen.checks.small import MOST, Steps, products
 from procgen.spec.records import dataclass
 
-_CHUNK = 32  # steps taken at once by matrix products, from a multiple of it on
+_CHUNK, _LONG_CHUNK = 32, 128  # steps taken at once by matrix products, from a multiple of it on; of a large state
+_MOST_GROWN = 1e3  # what a state may become over a chunk without its gains, which are taken off: rounding grows with it
 _KEPT = 16 << 20  # bytes of chunks that are kept
 _SETTLED = 1e-13  # relative change of the gain that counts as none
 _LONGEST = 65_536  # the gain is taken as settled after this many steps at the latest
@@ -59,7 +61,7 @@ class Kalman:
         self._memory = max(len(self._c), 1)
         self._small = products(self._a, self._c) <= MOST
         self._step, self._step_of_moves = _quick(self.a), _quick(self._a)
-        self._bytes = 8 * (_CHUNK + len(self._c)) ** 2
+        self._runs: dict[int, Run] = {}
         self._scale = float(np.max(np.abs(np.diag(self._p + self.q)))) or 1.0
 
     def start(self, paths: int) -> NDArray:
@@ -85,7 +87,7 @@ class Kalman:
             y = np.subtract(y, mean[:, None], out=out) if mean.any() else y
             return np.multiply(y, self._scales(step, len(y))[:, None], out=out), state
         small = self._small and y.shape[1] % GROUP == 0
-        size = BLOCK if small else _CHUNK
+        size = BLOCK if small else self._size
         y = y if small else y - mean[:, None]
         t = 0
         while t < len(y):
@@ -136,13 +138,27 @@ class Kalman:
             first = self.settled
         key = (first, count if small else -count)
         if key not in self._chunks:
-            while len(self._chunks) * self._bytes > _KEPT:
+            while len(self._chunks) * 8 * (count + len(self._c)) ** 2 > _KEPT:
                 del self._chunks[next(iter(self._chunks))]
             at = [min(first + i, len(self.gains) - 1) for i in range(count)]
             gains, roots = [self.gains[k][self._moves] for k in at], [self.roots[k] for k in at]
-            made = (self._c, gains, roots)
-            self._chunks[key] = Steps(self._a, *made) if small else Chunk(self._step_of_moves, *made)
+            self._chunks[key] = (
+                Steps(self._a, self._c, gains, roots) if small else Chunk(self._run(count), gains, roots)
+            )
         return self._chunks[key]
+
+    @cached_property
+    def _size(self) -> int:
+        """Steps of a chunk."""
+        size = _LONG_CHUNK if len(self._c) >= _LARGE else _CHUNK
+        while size > 1 and np.max(np.abs(self._run(size).power), initial=0.0) > _MOST_GROWN:
+            size //= 2
+        return size
+
+    def _run(self, count: int) -> Run:
+        if count not in self._runs:
+            self._runs[count] = Run(self._step_of_moves, self._a, self._c, count)
+        return self._runs[count]
 
     def _extend(self, step: int) -> None:
         """Gains up to `step`, until they settle."""
@@ -191,28 +207,41 @@ def _quick(a: NDArray) -> NDArray | Passing:
     return a if passing is None or 4 * len(passing.others) > len(a) else passing
 
 
+class Run:
+    """Some steps without gains: rows c A^i for each of them, and the power A^count."""
+
+    def __init__(self, step: NDArray | Passing, a: NDArray, c: NDArray, count: int):
+        self.step, self.c = step, c
+        self.rows = np.empty((count, len(c)))
+        row = c
+        for i in range(count):
+            self.rows[i], row = row, row @ a
+        self.power = np.linalg.matrix_power(a, count)
+
+
 class Chunk:
     """Some steps at once: v = H y − O state, and state' = M state + R y.
+
+    From y = rows state + (gains pushed on and seen) v, a triangular system for v, and state' = A^n state + G v, where
+    column i of G is the gain of step i pushed on to the end: H is the inverse of the system, O = H rows,
+    M = A^n − G O and R = G H. What is above the diagonal of H is rounding's, hence nothing.
 
     A sum over columns goes the same way for each of them, since every product has 16 columns, one lane group. What
     is left beside whole groups are always the same paths.
     """
 
-    def __init__(self, a: NDArray | Passing, c: NDArray, gains: list[NDArray], roots: list[float]):
-        count, d = len(gains), len(c)
-        self.h, self.o = np.zeros((count, count)), np.empty((count, d))
-        self.m, self.r = np.eye(d), np.zeros((d, count))
-        for i, (gain, root) in enumerate(zip(gains, roots, strict=True)):
-            scale = root if root > 0 else np.nan
-            seen = c @ self.r
-            self.o[i] = c @ self.m
-            self.h[i, :i] = -seen[:i]
-            self.h[i, i] = 1.0
-            self.m = a @ self.m - np.outer(gain, self.o[i])
-            self.r = a @ self.r - np.outer(gain, seen)
-            self.r[:, i] = gain
-            self.h[i] /= scale
-            self.o[i] /= scale
+    def __init__(self, run: Run, gains: list[NDArray], roots: list[float]):
+        count = len(gains)
+        pushed, system = np.zeros((len(run.c), count)), np.eye(count)
+        for i, gain in enumerate(gains):
+            system[i, :i] = run.c @ pushed[:, :i]
+            pushed[:, :i] = run.step @ pushed[:, :i]
+            pushed[:, i] = gain
+        self.h = np.tril(np.linalg.inv(system))
+        self.o = self.h @ run.rows
+        self.m, self.r = run.power - pushed @ self.o, pushed @ self.h
+        scales = np.where(np.array(roots) > 0, roots, np.nan)[:, None]
+        self.h, self.o = self.h / scales, self.o / scales
 
     def starts(self, columns: NDArray, state: NDArray) -> tuple[NDArray, NDArray]:
         """The state before each of a run of chunks, all in columns (size, chunks · paths), and that after the last."""
