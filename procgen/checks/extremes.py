@@ -27,6 +27,7 @@ _LEAST = 4.0  # standard deviations, below which a value is of no interest
 _JUST = 1.0 - 1e-9  # of a size, so that rounding leaves out nothing
 _FARTHEST = 1e300  # standard deviations that are told apart
 _CHUNK = 1 << 15  # steps whose theory is asked for at once, at most
+_KEPT = 4  # chunks of them
 _OUTSIDE = math.log(0.05)  # of a value that is farther than all values of N should be
 _ABSURD = 2.0  # times as far as the farthest of N should be
 _RARE = 100  # one absurd value in so many is an accident, more of them are a behaviour
@@ -42,6 +43,12 @@ class Reach:
         self.theory, self.grain, self.steps, self.size, self.n = theory, grain, steps, min(steps, _CHUNK), n
         self._chunks: dict[int, tuple[NDArray, NDArray]] = {}
         self._kurtosis: dict[int, float | None] = {}
+
+    def prepare(self) -> None:
+        """Ask the theory for the first steps, as many as are kept."""
+        if self._alike is None:
+            for k in range(min(-(-self.steps // self.size), _KEPT)):
+                self._chunk(k)
 
     def look(
         self,
@@ -119,7 +126,7 @@ class Reach:
             mean, variance = self.theory.mean(steps), self.theory.variance(steps)
             if mean is None or variance is None:
                 mean = variance = np.full(len(steps), np.nan)
-            while len(self._chunks) > 3:
+            while len(self._chunks) >= _KEPT:
                 self._chunks.pop(next(iter(self._chunks)))
             usable = np.isfinite(variance) & (variance > 0.0)
             self._chunks[k] = mean, np.sqrt(np.where(usable, variance, np.nan))

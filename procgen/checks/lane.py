@@ -51,7 +51,10 @@ def are_kept() -> bool:
 
 
 def get_ready(plan: Plan, compile: bool) -> None:
-    """Load what every tile needs, such as machine code and tables of laws: sums over zeros are made and thrown away."""
+    """Load what every tile needs, such as machine code and tables of laws: sums over zeros are made and thrown away.
+
+    What the theory says of all steps is asked for once, too, rather than by each process.
+    """
     with kernel.compiling(compile and kernel.available()):
         sums, tile = Gather(plan), np.zeros((BLOCK, WIDE))
         sums.structure.absorb(0, tile, 0, 0, np.zeros(WIDE, np.uint64))
@@ -59,6 +62,12 @@ def get_ready(plan: Plan, compile: bool) -> None:
             watch.absorb(tile)
         for shocks in sums.shocks.values():
             shocks.absorb(tile, 0, shocks.lane(WIDE))
+    for precision in plan.precision:
+        if precision.reach is not None:
+            precision.reach.prepare()
+    for route in sums.routes.values():
+        if route.kalman is not None:
+            route.kalman.prepare(plan.steps)
 
 
 class Lane:
